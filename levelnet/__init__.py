@@ -1,0 +1,90 @@
+"""levelnet: level populations of hydrogen through cosmological recombination.
+
+The public names are imported when they are first used, so that ``import levelnet`` stays fast.
+"""
+
+from __future__ import annotations
+
+from importlib import import_module
+from typing import TYPE_CHECKING
+
+if TYPE_CHECKING:
+    from .atomic.bound_bound import einstein_a
+    from .atomic.bound_free import (
+        photoionization_cross_section,
+        photoionization_rate,
+        recombination_coefficient,
+    )
+    from .atomic.two_photon import two_photon_profile, two_photon_rate
+    from .background import Cosmology, from_astropy, with_expansion
+    from .errors import AccuracyWarning, InputError, LevelnetError, Outcome, SolveError
+    from .escape.sobolev import escape_probability
+    from .history.result import History
+    from .history.run import solve
+    from .history.setup import Setup, load_setup
+    from .store import read, write
+
+__version__ = "0.1.0"
+
+_HOMES = {
+    "AccuracyWarning": "errors",
+    "Cosmology": "background",
+    "History": "history.result",
+    "InputError": "errors",
+    "LevelnetError": "errors",
+    "Outcome": "errors",
+    "Setup": "history.setup",
+    "SolveError": "errors",
+    "einstein_a": "atomic.bound_bound",
+    "escape_probability": "escape.sobolev",
+    "from_astropy": "background",
+    "load_setup": "history.setup",
+    "photoionization_cross_section": "atomic.bound_free",
+    "photoionization_rate": "atomic.bound_free",
+    "read": "store",
+    "recombination_coefficient": "atomic.bound_free",
+    "solve": "history.run",
+    "two_photon_profile": "atomic.two_photon",
+    "two_photon_rate": "atomic.two_photon",
+    "with_expansion": "background",
+    "write": "store",
+}
+
+__all__ = [
+    "AccuracyWarning",
+    "Cosmology",
+    "History",
+    "InputError",
+    "LevelnetError",
+    "Outcome",
+    "Setup",
+    "SolveError",
+    "__version__",
+    "einstein_a",
+    "escape_probability",
+    "from_astropy",
+    "load_setup",
+    "photoionization_cross_section",
+    "photoionization_rate",
+    "read",
+    "recombination_coefficient",
+    "solve",
+    "two_photon_profile",
+    "two_photon_rate",
+    "with_expansion",
+    "write",
+]
+
+
+def __getattr__(name: str) -> object:
+    """Import the home of a public name on first use."""
+    if name not in _HOMES:
+        raise AttributeError(f"module {__name__!r} has no attribute {name!r}")
+    value: object = getattr(import_module(f".{_HOMES[name]}", __name__), name)
+    globals()[name] = value
+    return value
+
+
+def __dir__() -> list[str]:
+    """Public names, imported or not."""
+    return sorted({*globals(), *__all__})

@@ -1,0 +1,22 @@
+"""Array checks shared by all records: right type and shape, finite, and read-only."""
+
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+FloatArray = NDArray[np.float64]
+IntArray = NDArray[np.int64]
+
+
+def frozen_array(record: Any, name: str, shape: tuple[int, ...], dtype: type = np.float64) -> None:
+    """Check field `name` of a frozen record against `shape` and mark it read-only.
+
+    A frozen dataclass alone does not freeze an array; a mistake in shape is the program's, so it
+    raises ValueError and not an InputError.
+    """
+    values = np.array(getattr(record, name), dtype=dtype)
+    if values.shape != shape:
+        raise ValueError(f"{type(record).__name__}.{name}: shape {values.shape}, expected {shape}")
+    values.flags.writeable = False
+    object.__setattr__(record, name, values)

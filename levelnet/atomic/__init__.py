@@ -1,0 +1,1 @@
+"""One atom or ion: levels and rates, no cosmology."""

@@ -1,0 +1,1 @@
+"""The command line: hands records from the engine to the store and to the report."""

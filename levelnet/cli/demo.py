@@ -1,0 +1,75 @@
+"""``levelnet demo``: an invented scenario from setup to figures."""
+
+from __future__ import annotations
+
+import argparse
+import time
+from importlib.resources import files
+from pathlib import Path
+
+from .console import Console
+from .output import history_values, print_json, summary_text, time_text
+from .paths import check_folder
+from .solve import compute, finish
+
+NAME = "demo"
+SUMMARY = "solve an invented scenario and draw it"
+DESCRIPTION = (
+    "Write the setup of an invented scenario, solve it, and draw its figures. The instrument and "
+    "its cosmology do not exist."
+)
+EXAMPLE = "levelnet demo --output demo-folder"
+
+_INVENTED = "This scenario is invented: no real instrument, no measured cosmology."
+
+
+def add_arguments(parser: argparse.ArgumentParser) -> None:
+    """Declare the options of this command."""
+    parser.add_argument(
+        "--output",
+        "-o",
+        metavar="FOLDER",
+        type=Path,
+        default=Path("levelnet-demo"),
+        help="folder for setup, result and figures (default: levelnet-demo)",
+    )
+    parser.add_argument("--force", action="store_true", help="overwrite what is in the folder")
+
+
+def demo_text() -> str:
+    """Return the text of the demo's setup file."""
+    return files("levelnet.cli").joinpath("demo.toml").read_text(encoding="utf-8")
+
+
+def run(options: argparse.Namespace, console: Console) -> int:
+    """Write demo.toml, demo.h5 and figures; print the summary."""
+    start = time.monotonic()
+    folder: Path = options.output
+    from ..report.figures import check_free, figure_paths, save_figures
+
+    setup_file, result_file = folder / "demo.toml", folder / "demo.h5"
+    check_folder(folder)
+    check_free((setup_file, result_file, *figure_paths(folder)), options.force)
+
+    from ..history.setup import parse_setup
+    from ..store import whole_file, write
+
+    history, seconds = compute(parse_setup(demo_text(), "demo.toml"), console, cache=True)
+    # Nothing is written before the calculation has ended well enough to show.
+    folder.mkdir(parents=True, exist_ok=True)
+    with whole_file(setup_file, options.force) as stream:
+        stream.write(demo_text().encode())
+    write(history, result_file, force=options.force)
+    figures = save_figures(history, folder, force=options.force)
+    total = time.monotonic() - start
+    written = [setup_file, result_file, *figures]
+    if options.json:
+        more = {"invented": True, "written": written, "seconds": seconds, "total_seconds": total}
+        print_json({**history_values(history), **more})
+    else:
+        print(f"{_INVENTED}\n")
+        print(summary_text(history))
+        for path in written:
+            print(f"{'written':<22}{path}")
+        print(f"{'time':<22}{time_text(total)}, of it {time_text(seconds)} solving")
+    return finish(history, console)

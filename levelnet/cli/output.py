@@ -1,0 +1,198 @@
+"""Results as text for people and as plain values for JSON."""
+
+from __future__ import annotations
+
+import json
+import math
+from collections.abc import Sequence
+from typing import TYPE_CHECKING, Any
+
+from ..constants import SECONDS_PER_YEAR
+
+if TYPE_CHECKING:
+    from ..history.result import History
+
+_SAMPLES = (1700.0, 1400.0, 1300.0, 1200.0, 1100.0, 1000.0, 800.0, 500.0, 200.0, 100.0, 50.0, 20.0)
+_CHANNELS_SHOWN = 6
+
+
+def print_json(values: object) -> None:
+    """Print `values` as JSON; what is not a number becomes null, as JSON knows no NaN."""
+    print(json.dumps(_plain(values), indent=2, allow_nan=False))
+
+
+def _plain(value: Any) -> Any:
+    if isinstance(value, dict):
+        return {str(key): _plain(one) for key, one in value.items()}
+    if isinstance(value, list | tuple):
+        return [_plain(one) for one in value]
+    if hasattr(value, "tolist"):  # arrays and numpy scalars
+        return _plain(value.tolist())
+    if isinstance(value, float) and not math.isfinite(value):
+        return None
+    return value if isinstance(value, str | int | float | bool | None) else str(value)
+
+
+def size_text(memory_bytes: float) -> str:
+    """Bytes as MiB or GiB."""
+    gib = memory_bytes / 2**30
+    return f"{gib:.1f} GiB" if gib >= 1.0 else f"{memory_bytes / 2**20:.0f} MiB"
+
+
+def time_text(seconds: float) -> str:
+    """Seconds as a person says them."""
+    if seconds < 120.0:
+        return f"{seconds:.1f} s" if seconds < 10.0 else f"{seconds:.0f} s"
+    if seconds < 7200.0:
+        return f"{seconds / 60.0:.0f} min"
+    return f"{seconds / 3600.0:.1f} h"
+
+
+def sample_rows(history: History) -> list[int]:
+    """Find the outputs nearest to a few round redshifts; indices, each once, ascending."""
+    import numpy as np
+
+    low, high = history.redshift[-1], history.redshift[0]
+    wanted = [z for z in _SAMPLES if low <= z <= high] or [float(high)]
+    nearest = {int(np.argmin(np.abs(history.redshift - z))) for z in wanted}
+    # The last output is what most readers ask for.
+    return sorted(nearest | {len(history.redshift) - 1})
+
+
+def history_values(history: History) -> dict[str, Any]:
+    """Collect what the summary shows, under the names of the result's fields."""
+    marks, how, setup = history.milestones, history.diagnostics, history.setup
+    rows = sample_rows(history)
+    return {
+        "title": setup.title,
+        "setup_digest": setup.digest,
+        "outcome": history.outcome.name,
+        "ok": history.outcome.ok,
+        "outcome_text": history.outcome.value,
+        "hydrogen_n_max": setup.hydrogen.n_max,
+        "n_levels": {one.name: len(one.levels) for one in history.species},
+        "n_redshifts": len(history.redshift),
+        "milestones": {name: getattr(marks, name) for name in marks.__slots__},
+        "samples": {
+            name: getattr(history, name)[rows]
+            for name in (
+                "redshift",
+                "free_electron_fraction",
+                "neutral_hydrogen_fraction",
+                "matter_temperature_k",
+                "radiation_temperature_k",
+            )
+        },
+        "cumulative_channel_shares": dict(
+            zip(history.channels.names, history.channels.cumulative_share[-1], strict=True)
+        ),
+        "diagnostics": {name: getattr(how, name) for name in how.__slots__},
+        "notes": list(history.notes),
+    }
+
+
+def summary_text(history: History) -> str:
+    """Return the summary of a history as lines of plain text."""
+    setup = history.setup
+    n_levels = sum(len(one.levels) for one in history.species)
+    head = [
+        setup.title or "(no title)",
+        _row(
+            "setup",
+            f"{setup.digest}: hydrogen n_max = {setup.hydrogen.n_max} ({n_levels} levels), "
+            f"lines {setup.lines.hydrogen}, z = {history.redshift[0]:g} to "
+            f"{history.redshift[-1]:g} ({len(history.redshift)} outputs)",
+        ),
+        _row("outcome", history.outcome.value),
+        "",
+    ]
+    body = [*_milestone_lines(history), "", *_sample_lines(history), "", *_share_lines(history)]
+    return "\n".join([*head, *body, "", *_diagnostic_lines(history), *_note_lines(history)])
+
+
+def _row(label: str, text: str) -> str:
+    return f"{label:<22}{text}"
+
+
+def _milestone_lines(history: History) -> list[str]:
+    marks = history.milestones
+    age = marks.last_scattering_time_s / SECONDS_PER_YEAR
+    lines = (
+        ("z_* (tau = 1)", marks.last_scattering_redshift, "{:.2f}", f"at {age:,.0f} years"),
+        ("visibility peak", marks.visibility_peak_redshift, "z = {:.2f}", "of g(eta)"),
+        ("visibility width", marks.visibility_width, "{:.2f}", "full width at half maximum in z"),
+        ("half ionized", marks.half_ionized_redshift, "z = {:.2f}", "x_e = 0.5"),
+    )
+    return [
+        _row(label, f"{form.format(value)}  ({what})" if math.isfinite(value) else "not reached")
+        for label, value, form, what in lines
+    ]
+
+
+def _sample_lines(history: History) -> list[str]:
+    rows = sample_rows(history)
+    head = ("z", "x_e", "x_HI", "T_m (K)", "T_r (K)")
+    body = [
+        (
+            f"{history.redshift[k]:.2f}",
+            f"{history.free_electron_fraction[k]:.6e}",
+            f"{history.neutral_hydrogen_fraction[k]:.6e}",
+            f"{history.matter_temperature_k[k]:.6g}",
+            f"{history.radiation_temperature_k[k]:.6g}",
+        )
+        for k in rows
+    ]
+    return aligned([head, *body], right=True)
+
+
+def _share_lines(history: History) -> list[str]:
+    channels = history.channels
+    ranked = sorted(
+        zip(channels.names, channels.cumulative_share[-1], strict=True), key=lambda one: -one[1]
+    )
+    shown = [f"{name} {100.0 * share:.3f} %" for name, share in ranked[:_CHANNELS_SHOWN]]
+    rest = ranked[_CHANNELS_SHOWN:]
+    if rest:
+        total = 100.0 * sum(share for _, share in rest)
+        shown.append(f"{len(rest)} more {total:.3f} %")
+    return [_row("recombined through", ", ".join(shown))]
+
+
+def _diagnostic_lines(history: History) -> list[str]:
+    how = history.diagnostics
+    nodes = (
+        f"{how.nodes} nodes, error {how.interpolation_error:.1e}"
+        if how.nodes
+        else "direct, no interpolation"
+    )
+    return [
+        _row(
+            "integration",
+            f"{how.steps} steps ({how.rejected_steps} rejected), {how.evaluations} evaluations, "
+            f"relative tolerance {history.setup.accuracy.relative:g}",
+        ),
+        _row("reduced network", nodes),
+        _row(
+            "Saha hand-over",
+            f"z = {how.handover_redshift:.2f}, departure {how.handover_departure:.1e}",
+        ),
+        _row("conservation error", f"{how.conservation_error:.1e}"),
+        _row(
+            "slowest relaxation",
+            f"{how.slowest_relaxation_hubble:.3g} Hubble rates (quasi-steady needs far above 1)",
+        ),
+    ]
+
+
+def _note_lines(history: History) -> list[str]:
+    return [_row("note", text) for text in history.notes]
+
+
+def aligned(rows: Sequence[Sequence[str]], right: bool = False) -> list[str]:
+    """Lines of a table with columns of equal width, two blanks apart."""
+    widths = [max(len(row[k]) for row in rows) for k in range(len(rows[0]))]
+    pad = str.rjust if right else str.ljust
+    return [
+        "  ".join(pad(cell, w) for cell, w in zip(row, widths, strict=True)).rstrip()
+        for row in rows
+    ]

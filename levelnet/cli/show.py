@@ -1,0 +1,108 @@
+"""``levelnet show``: what is in a result file, as summary, table or figures."""
+
+from __future__ import annotations
+
+import argparse
+import sys
+from pathlib import Path
+from typing import TYPE_CHECKING, TextIO
+
+from ..errors import InputError
+from .console import Console
+from .output import history_values, print_json, summary_text
+from .paths import check_folder, check_target
+
+if TYPE_CHECKING:
+    from ..history.result import History
+
+NAME = "show"
+SUMMARY = "sum up a result file; draw figures, write a table"
+DESCRIPTION = "Print the summary of a result file; write its figures or its table."
+EXAMPLE = "levelnet show result.h5 --plot figures"
+
+_BESIDE = ""  # stands for "a folder named after the file"
+
+
+def add_arguments(parser: argparse.ArgumentParser) -> None:
+    """Declare the options of this command."""
+    parser.add_argument("file", metavar="FILE", type=Path, help="result file (HDF5)")
+    parser.add_argument(
+        "--plot",
+        metavar="FOLDER",
+        nargs="?",
+        const=_BESIDE,
+        help="write figures (SVG and PDF) into FOLDER (default: name of the file with -figures)",
+    )
+    parser.add_argument(
+        "--redshift",
+        metavar="Z",
+        type=float,
+        help="redshift of the departure map (default: near the visibility peak)",
+    )
+    parser.add_argument(
+        "--csv", metavar="FILE", help="write the history as a table; - prints it instead"
+    )
+    parser.add_argument(
+        "--ascending", action="store_true", help="table with redshift ascending, not descending"
+    )
+    parser.add_argument("--force", action="store_true", help="overwrite figures and table")
+
+
+def run(options: argparse.Namespace, console: Console) -> int:
+    """Print the summary and write what was asked for."""
+    folder = _checked_places(options)
+
+    from ..store import read
+
+    history = read(options.file)
+    if options.csv == "-":
+        written = _save_figures(history, folder, options)
+        _write_table(history, sys.stdout, options)
+    else:
+        written = _save_figures(history, folder, options)
+        if options.csv is not None:
+            _write_table(history, Path(options.csv), options)
+            written.append(Path(options.csv))
+        _print_summary(history, written, options)
+    return 0
+
+
+def _checked_places(options: argparse.Namespace) -> Path | None:
+    """Refuse what cannot be done before anything is; return the folder for figures, if any."""
+    if options.csv == "-" and options.json:
+        raise InputError("--csv -: --json prints to stdout too; give one of them")
+    if options.ascending and options.csv is None:
+        raise InputError("--ascending: orders the table of --csv, which is not asked for")
+    if options.redshift is not None and options.plot is None:
+        raise InputError("--redshift: chooses the departure map of --plot, which is not asked for")
+    if options.csv not in {None, "-"}:
+        check_target(Path(options.csv), options.force, options.file)
+    if options.plot is None:
+        return None
+    folder = Path(options.plot or f"{options.file.stem}-figures")
+    check_folder(folder)
+    return folder
+
+
+def _save_figures(history: History, folder: Path | None, options: argparse.Namespace) -> list[Path]:
+    if folder is None:
+        return []
+    from ..report.figures import save_figures
+
+    return list(save_figures(history, folder, force=options.force, redshift=options.redshift))
+
+
+def _write_table(history: History, target: Path | TextIO, options: argparse.Namespace) -> None:
+    from ..store import write_csv
+
+    write_csv(history, target, ascending=options.ascending, force=options.force)
+
+
+def _print_summary(history: History, written: list[Path], options: argparse.Namespace) -> None:
+    if options.json:
+        print_json({**history_values(history), "file": options.file, "written": written})
+        return
+    print(summary_text(history))
+    print(f"{'file':<22}{options.file}")
+    for path in written:
+        print(f"{'written':<22}{path}")

@@ -1,0 +1,145 @@
+"""``levelnet solve``: from a setup file to a result file."""
+
+from __future__ import annotations
+
+import argparse
+import dataclasses
+import time
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+from .console import Console
+from .output import history_values, print_json, size_text, summary_text, time_text
+from .paths import check_target
+
+if TYPE_CHECKING:
+    from ..history.result import History
+    from ..history.setup import Setup
+
+NAME = "solve"
+SUMMARY = "solve a setup file, write the result as HDF5"
+DESCRIPTION = (
+    "Solve the ionization history and the level populations of a setup file (TOML), write them to "
+    "an HDF5 file and print a summary."
+)
+EXAMPLE = "levelnet solve setup.toml --output result.h5"
+
+_LONG_S, _LARGE_BYTES = 10.0, 2**30  # above either, cost is announced before the work starts
+
+
+def add_arguments(parser: argparse.ArgumentParser) -> None:
+    """Declare the options of this command."""
+    parser.add_argument("setup", metavar="SETUP", type=Path, help="setup file (TOML)")
+    parser.add_argument(
+        "-o",
+        "--output",
+        metavar="FILE",
+        type=Path,
+        help="result file (default: name of the setup with .h5, in the current folder)",
+    )
+    parser.add_argument("--force", action="store_true", help="overwrite the result file")
+    parser.add_argument(
+        "--dry-run", action="store_true", help="check the setup, estimate memory and time, stop"
+    )
+    parser.add_argument(
+        "--no-cache", action="store_true", help="neither read nor fill the cache of atomic rates"
+    )
+    parser.add_argument(
+        "--direct",
+        action="store_true",
+        help="reduce the network at every evaluation instead of interpolating (slow, for checking)",
+    )
+
+
+def run(options: argparse.Namespace, console: Console) -> int:
+    """Solve, write, print the summary; 0 if the outcome is ok, 1 if not."""
+    from ..history.setup import load_setup
+
+    setup = load_setup(options.setup)
+    if options.direct:
+        accuracy = dataclasses.replace(setup.accuracy, interpolate=False)
+        setup = dataclasses.replace(setup, accuracy=accuracy)
+    target = options.output or Path(f"{options.setup.stem}.h5")
+    if options.dry_run:
+        return _dry_run(setup, options.json)
+    check_target(target, options.force, options.setup)
+    history, seconds = compute(setup, console, cache=not options.no_cache)
+
+    from ..store import write
+
+    write(history, target, force=options.force)
+    if options.json:
+        print_json({**history_values(history), "file": target, "seconds": seconds})
+    else:
+        print(summary_text(history))
+        print(f"{'file':<22}{target} (solved in {time_text(seconds)})")
+    return finish(history, console)
+
+
+def compute(setup: Setup, console: Console, cache: bool) -> tuple[History, float]:
+    """Solve with a look at cost first, one BLAS thread and a progress bar.
+
+    Returns
+    -------
+    tuple of History and float
+        The result, and the wall time in s.
+    """
+    from threadpoolctl import threadpool_limits
+
+    from ..history.cost import check_memory, estimate
+    from ..history.run import solve
+
+    check_memory(setup)
+    cost = estimate(setup)
+    if cost.seconds > _LONG_S or cost.memory_bytes > _LARGE_BYTES:
+        console.notice(
+            f"estimated: {time_text(cost.seconds)}, {size_text(cost.memory_bytes)} of memory"
+        )
+    pieces = _cache(console) if cache else None
+    # The limit reaches only libraries that are loaded: scipy's BLAS is another one than numpy's.
+    import scipy.linalg  # noqa: F401
+
+    start = time.monotonic()
+    with threadpool_limits(limits=1, user_api="blas"), console.progress() as progress:
+        history = solve(setup, progress=progress, pieces=pieces)
+    return history, time.monotonic() - start
+
+
+def _cache(console: Console) -> Any:
+    """Return the folder of cached rates, or None where there is no place for it."""
+    from ..pieces import FolderPieces, default_cache_folder
+
+    try:
+        return FolderPieces(default_cache_folder())
+    except OSError as error:
+        console.notice(f"no cache of atomic rates: {error.strerror or error}")
+        return None
+
+
+def _dry_run(setup: Setup, as_json: bool) -> int:
+    from ..history.cost import check_memory, estimate
+
+    cost = estimate(setup)
+    check_memory(setup)
+    if as_json:
+        print_json(
+            {
+                "setup_digest": setup.digest,
+                "memory_bytes": cost.memory_bytes,
+                "seconds": cost.seconds,
+            }
+        )
+    else:
+        print(
+            f"setup {setup.digest} is valid; estimated: {time_text(cost.seconds)}, "
+            f"{size_text(cost.memory_bytes)} of memory"
+        )
+    return 0
+
+
+def finish(history: History, console: Console) -> int:
+    """Exit code of a result; one that is not ok is said on stderr too."""
+    if history.outcome.ok:
+        return 0
+    console.error(f"{history.outcome.name}: {history.outcome.value}", kind="")
+    return 1

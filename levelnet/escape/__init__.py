@@ -1,0 +1,1 @@
+"""How line photons leave."""

@@ -1,0 +1,200 @@
+"""The family of line-escape treatments: one interface, one tuple of all members."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import ClassVar, Protocol
+
+import numpy as np
+
+from .. import constants as const
+from ..arrays import FloatArray, IntArray, frozen_array
+from ..background.conditions import Conditions
+from ..network.coupling import GroundCoupling, blackbody_coupling
+from ..network.reduced import KeptLevels
+from ..network.solve import log_boltzmann_populations
+from .sobolev import escape_probability, escape_slope, sobolev_optical_depth
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class ResonanceLines:
+    """Lines between kept levels and the ground state; every array has shape (n_lines,).
+
+    Attributes
+    ----------
+    names : tuple of str
+        "2p-1s", "3p-1s", ...
+    upper : ndarray of int
+        Position of the upper level among the kept levels.
+    einstein_a_per_s : ndarray, s^-1
+        Spontaneous rate.
+    energy_ev : ndarray, eV
+        Transition energy.
+    weight_ratio : ndarray, dimensionless
+        Statistical weight of the upper level over that of the ground state.
+    decay_rate_per_s : ndarray, s^-1
+        Spontaneous decay rate of the upper level in all its lines; sets the natural width.
+    """
+
+    names: tuple[str, ...]
+    upper: IntArray
+    einstein_a_per_s: FloatArray
+    energy_ev: FloatArray
+    weight_ratio: FloatArray
+    decay_rate_per_s: FloatArray
+
+    def __post_init__(self) -> None:
+        """Check shapes and make every array read-only."""
+        shape = (len(self.names),)
+        frozen_array(self, "upper", shape, int)
+        for name in ("einstein_a_per_s", "energy_ev", "weight_ratio", "decay_rate_per_s"):
+            frozen_array(self, name, shape)
+
+    @property
+    def wavelength_cm(self) -> FloatArray:
+        """Vacuum wavelengths, cm."""
+        return const.PLANCK_EV_S * const.SPEED_OF_LIGHT_CM_S / self.energy_ev
+
+
+class LineTreatment(Protocol):
+    """How photons of the resonance lines escape; a member of the family or a user's own object.
+
+    Attributes
+    ----------
+    name : str
+        As in a setup file.
+    assumes : tuple of str
+        Short sentences.
+    holds_for : tuple of str
+        Validity figures and their limits.
+    """
+
+    name: ClassVar[str]
+    assumes: ClassVar[tuple[str, ...]]
+    holds_for: ClassVar[tuple[str, ...]]
+
+    def couple(
+        self,
+        lines: ResonanceLines,
+        kept: KeptLevels,
+        conditions: Conditions,
+        memory: object,
+        step: float,
+    ) -> GroundCoupling:
+        """Give K and s of the net flow K x - s to the ground state at these conditions."""
+        ...
+
+    def advance(self, memory: object, log_population: FloatArray) -> object:
+        """Give the memory after a step that ended with these kept populations."""
+        ...
+
+
+@dataclass(frozen=True, slots=True)
+class _WithoutMemory:
+    """What treatments share whose lines each see the blackbody and remember nothing."""
+
+    def advance(self, memory: object, log_population: FloatArray) -> object:
+        """Give the memory back untouched."""
+        return memory
+
+    def couple(
+        self,
+        lines: ResonanceLines,
+        kept: KeptLevels,
+        conditions: Conditions,
+        memory: object,
+        step: float,
+    ) -> GroundCoupling:
+        """Couple each line by A P (1 + f) and the blackbody that fills it."""
+        kt = const.BOLTZMANN_EV_K * conditions.radiation_temperature_k
+        exponent = lines.energy_ev / kt
+        emptiness = -np.expm1(-exponent)  # 1 + f = 1 / (1 - e^-x)
+        depth = sobolev_optical_depth(
+            lines.einstein_a_per_s,
+            lines.wavelength_cm,
+            lines.weight_ratio,
+            conditions.hydrogen_density_cm3 * conditions.ground_fraction,
+            conditions.hubble_rate_per_s,
+        )
+        chance, slope = self.escape(depth)
+        rate = lines.einstein_a_per_s * chance / emptiness
+        loss, by_column, by_temperature = np.zeros((3, len(kept)))
+        loss[lines.upper] = rate
+        by_column[lines.upper] = rate * slope
+        # d ln(1+f) / d ln T = x f; f underflows long before x f matters.
+        by_temperature[lines.upper] = rate * exponent * np.exp(-exponent) / emptiness
+        boltzmann = np.exp(
+            log_boltzmann_populations(
+                kept, conditions.radiation_temperature_k, conditions.ground_fraction
+            )
+        )
+        validity = {"optical_depth": depth, "escape_probability": chance}
+        return blackbody_coupling(loss, by_column, by_temperature, boltzmann, memory, validity)
+
+    def escape(self, optical_depth: FloatArray) -> tuple[FloatArray, FloatArray]:
+        """Give the escape probability and its logarithmic slope in the optical depth."""
+        raise NotImplementedError
+
+
+@dataclass(frozen=True, slots=True)
+class Closed(_WithoutMemory):
+    """No line photon escapes: atoms reach the ground state by two-photon decay alone."""
+
+    name: ClassVar[str] = "closed"
+    assumes: ClassVar[tuple[str, ...]] = (
+        "Every photon of a resonance line is absorbed again in the same line.",
+    )
+    holds_for: ClassVar[tuple[str, ...]] = (
+        "A lower bound on the speed of recombination; 2p has no exit below z ~ 300, where the "
+        "quasi-steady state loses its meaning.",
+    )
+
+    def escape(self, optical_depth: FloatArray) -> tuple[FloatArray, FloatArray]:
+        """Nothing escapes."""
+        return np.zeros_like(optical_depth), np.zeros_like(optical_depth)
+
+
+@dataclass(frozen=True, slots=True)
+class Open(_WithoutMemory):
+    """Every line photon escapes: the optically thin limit."""
+
+    name: ClassVar[str] = "open"
+    assumes: ClassVar[tuple[str, ...]] = ("No photon of a resonance line is absorbed again.",)
+    holds_for: ClassVar[tuple[str, ...]] = (
+        "Optical depth far below 1; in a recombining universe an upper bound on the speed only.",
+    )
+
+    def escape(self, optical_depth: FloatArray) -> tuple[FloatArray, FloatArray]:
+        """Everything escapes."""
+        return np.ones_like(optical_depth), np.zeros_like(optical_depth)
+
+
+@dataclass(frozen=True, slots=True)
+class Sobolev(_WithoutMemory):
+    """Each line alone, photons redshifting out of it: P = (1 - e^-tau) / tau."""
+
+    name: ClassVar[str] = "sobolev"
+    assumes: ClassVar[tuple[str, ...]] = (
+        "Complete redistribution over the line profile.",
+        "Conditions stay constant while a photon crosses the line.",
+        "Lines do not overlap; the field on the blue side is the blackbody.",
+        "No continuum absorbs inside the line.",
+    )
+    holds_for: ClassVar[tuple[str, ...]] = (
+        "Time to cross the thick part of the line far below a Hubble time (crossing_time_hubble << 1). "
+        "Lyman-alpha at z ~ 1100 leaves that range; two-photon wings, recoil and diffusion then "
+        "change x_e by 1 to 2 per cent (Hirata 2008, Phys. Rev. D 78, 023001; Chluba & Sunyaev 2009, "
+        "Astron. Astrophys. 503, 345).",
+    )
+
+    def escape(self, optical_depth: FloatArray) -> tuple[FloatArray, FloatArray]:
+        """Sobolev's escape probability."""
+        return escape_probability(optical_depth), escape_slope(optical_depth)
+
+
+TREATMENTS: tuple[LineTreatment, ...] = (Closed(), Open(), Sobolev())
+
+
+def treatment(name: str) -> LineTreatment:
+    """The member of the family with this name."""
+    return next(member for member in TREATMENTS if member.name == name)

@@ -1,0 +1,1 @@
+"""The calculation through redshift, and its result."""

@@ -1,0 +1,52 @@
+"""From a setup to the atom of one run: its ladder, kept levels and resonance lines."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from ..atomic.bound_bound import einstein_a
+from ..escape.treatment import ResonanceLines
+from ..network.ladder import Ladder, hydrogen_ladder
+from .setup import Setup
+
+
+def open_lyman_lines(setup: Setup) -> int:
+    """How many Lyman lines exchange photons with the ground state."""
+    count = setup.lines.lyman_lines
+    highest = setup.hydrogen.n_max - 1
+    return highest if isinstance(count, str) else count
+
+
+def build_ladder(setup: Setup, n_max: int | None = None) -> Ladder:
+    """Hydrogen of this setup; 2s, 2p and every np whose Lyman line is open are kept.
+
+    Parameters
+    ----------
+    setup : Setup
+        The run.
+    n_max : int, optional
+        A smaller atom than asked, for estimates.
+    """
+    top = n_max or setup.hydrogen.n_max
+    count = min(open_lyman_lines(setup), top - 1)
+    kept = ((2, 0), *((n, 1) for n in range(2, count + 2)))
+    return hydrogen_ladder(top, setup.hydrogen.energies, kept)
+
+
+def lyman_lines(ladder: Ladder) -> ResonanceLines:
+    """Lyman lines from the kept np levels."""
+    upper = np.flatnonzero(ladder.kept.l == 1)
+    n = ladder.kept.n[upper]
+    decay = [
+        float(np.sum(einstein_a(k, 1, np.arange(1, k), 0)))
+        + float(np.sum(einstein_a(k, 1, np.arange(3, k), 2)))
+        for k in n.tolist()
+    ]
+    return ResonanceLines(
+        tuple(f"{k}p-1s" for k in n),
+        upper,
+        einstein_a(n, np.ones_like(n), np.ones_like(n), np.zeros_like(n)),
+        ladder.kept.energy_ev[upper],
+        ladder.kept.statistical_weight[upper] / 2.0,
+        np.array(decay),
+    )

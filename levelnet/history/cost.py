@@ -1,0 +1,105 @@
+"""What a run will take, estimated before it starts."""
+
+from __future__ import annotations
+
+import os
+from dataclasses import dataclass
+
+from ..errors import InputError
+from ..network.reduction import node_count
+from .setup import Setup
+
+# Measured on one core of a 2 GHz-class x86-64 server: sustained rate of the factorization for large
+# blocks, and the overhead per block and per evaluation. Good to a factor of two or three.
+_FLOP_PER_S = 2.0e10
+_SECONDS_PER_BLOCK = 6e-5
+_SECONDS_PER_EVALUATION = 2.5e-4
+_EVALUATIONS = 4000
+HIGHEST_N = 1000
+_RESERVE_BYTES = 3e8
+
+
+@dataclass(frozen=True, slots=True)
+class Cost:
+    """Estimated cost of one run.
+
+    Attributes
+    ----------
+    memory_bytes : float
+        Largest memory in use.
+    seconds : float, s
+        Time on one core, to a factor of two or three.
+    """
+
+    memory_bytes: float
+    seconds: float
+
+
+def estimate(setup: Setup) -> Cost:
+    """Estimate memory and time of a run from its sizes.
+
+    Three cubes of n_max^3/3 numbers (line strengths, couplings, factors), the cross sections, and the
+    populations at every output redshift.
+    """
+    n = setup.hydrogen.n_max
+    n_out = len(setup.grid.redshifts or ()) or setup.grid.n_redshifts
+    cubes = 3 * 8.0 * n**3 / 3.0
+    memory = cubes + 400.0 * n**2 + 5 * 8.0 * n_out * n**2 / 2.0 + _RESERVE_BYTES
+    low = setup.cosmology.cmb_temperature_k * (1.0 + setup.grid.redshift_end)
+    nodes = node_count(low, 6000.0, table_tolerance(setup)) + 7 if setup.accuracy.interpolate else 0
+    node = 7.0 / 12.0 * n**4 / _FLOP_PER_S + 3.0 * n**3 / 1e9 + _SECONDS_PER_BLOCK * n
+    evaluation = _SECONDS_PER_EVALUATION if setup.accuracy.interpolate else 5.0 * node
+    return Cost(memory, (nodes + n_out) * node + _EVALUATIONS * evaluation + 1e-8 * n**3)
+
+
+def table_tolerance(setup: Setup) -> float:
+    """Error allowed in the ln of any reduced rate: a hundredth of what the history may have."""
+    return max(0.01 * setup.accuracy.relative, 1e-11)
+
+
+def check_memory(setup: Setup) -> Cost:
+    """Estimate the cost; InputError with the figure if it cannot fit or n_max is out of range."""
+    cost = estimate(setup)
+    available = available_memory_bytes()
+    n = setup.hydrogen.n_max
+    figure = f"about {_readable(cost.memory_bytes)} of memory needed"
+    if cost.memory_bytes > available:
+        raise InputError(f"hydrogen.n_max = {n}: {figure}, {_readable(available)} available")
+    if n > HIGHEST_N:
+        raise InputError(
+            f"hydrogen.n_max = {n}: {figure}; rates are tested up to {HIGHEST_N}, the highest allowed"
+        )
+    return cost
+
+
+def available_memory_bytes() -> float:
+    """Memory this process may still take: what the system reports, less what a container forbids."""
+    pages = os.sysconf("SC_AVPHYS_PAGES") * os.sysconf("SC_PAGE_SIZE")
+    limits = [_available_from_proc() or pages]
+    for path in ("/sys/fs/cgroup/memory.max", "/sys/fs/cgroup/memory/memory.limit_in_bytes"):
+        try:
+            with open(path, encoding="ascii") as file:
+                limits.append(float(file.read()))
+        except (OSError, ValueError):  # no such limit, or "max"
+            continue
+    return min(limits)
+
+
+def _available_from_proc() -> float | None:
+    try:
+        with open("/proc/meminfo", encoding="ascii") as file:
+            for line in file:
+                if line.startswith("MemAvailable:"):
+                    return float(line.split()[1]) * 1024.0
+    except OSError:
+        pass
+    return None
+
+
+def _readable(size: float) -> str:
+    """Size in the unit that keeps one to three digits before the point."""
+    for unit in ("bytes", "kB", "MB", "GB"):
+        if size < 1000.0:
+            return f"{size:.3g} {unit}"
+        size /= 1000.0
+    return f"{size:.3g} TB"

@@ -1,0 +1,188 @@
+"""The slow variables: their rates of change and the analytic Jacobian.
+
+The variables are u = ln(x_HII/x_HI) and v = ln(T_m/T_r), the time is s = ln a. Then x_HII and x_HI follow
+from u to full relative precision at both ends, an absolute error of u is a relative error of either
+fraction, and the tiny difference of the two temperatures is carried as such:
+
+    du/ds = -F / (H x_HII x_HI),        F the net recombinations per hydrogen nucleus and second,
+    dv/ds = -1 + (Gamma/H) (e^-v - 1),  Gamma the Compton rate.
+
+The heat that recombining electrons take along, of order (dx_e/dt)/Gamma or 1e-6 of T_m at most where it
+counts, is left out (common practice).
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+from typing import NamedTuple
+
+import numpy as np
+
+from ..arrays import FloatArray
+from ..background.conditions import Conditions
+from ..background.cosmology import Cosmology
+from ..background.matter import compton_rate_per_s
+from ..escape.treatment import LineTreatment, ResonanceLines
+from ..escape.two_photon import two_photon_coupling
+from ..network.coupling import GroundCoupling, combine
+from ..network.reduced import Reduced, ReducedRates
+from ..network.solve import FlowSlopes, KeptSolution, flow_slopes, solve_kept
+
+
+class Background(NamedTuple):
+    """What the cosmology says at one time.
+
+    Attributes
+    ----------
+    radiation_temperature_k : float, K
+        T_r.
+    hydrogen_density_cm3 : float, cm^-3
+        n_H.
+    hubble_rate_per_s : float, s^-1
+        H.
+    hubble_slope : float, dimensionless
+        d ln H / d ln a.
+    """
+
+    radiation_temperature_k: float
+    hydrogen_density_cm3: float
+    hubble_rate_per_s: float
+    hubble_slope: float
+
+
+class Local(NamedTuple):
+    """Everything computed at one time and state."""
+
+    conditions: Conditions
+    rates: ReducedRates
+    coupling: GroundCoupling
+    solution: KeptSolution
+
+
+def ionized_and_neutral(log_odds: float) -> tuple[float, float]:
+    """x_HII and x_HI from u, each to full relative precision."""
+    if log_odds > 0.0:
+        odds = math.exp(-log_odds)
+        return 1.0 / (1.0 + odds), odds / (1.0 + odds)
+    odds = math.exp(log_odds)
+    return odds / (1.0 + odds), 1.0 / (1.0 + odds)
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class SlowEquations:
+    """The right-hand side of one run.
+
+    Attributes
+    ----------
+    cosmology : Cosmology
+        The background.
+    reduced : Reduced
+        The interior of the atom.
+    lines : ResonanceLines
+        Lines to the ground state.
+    treatment : LineTreatment
+        How their photons escape.
+    two_photon_rate_per_s : float, s^-1
+        Spontaneous 2s-1s rate.
+    two_photon_mode : str
+        "spontaneous" or "stimulated".
+    """
+
+    cosmology: Cosmology
+    reduced: Reduced
+    lines: ResonanceLines
+    treatment: LineTreatment
+    two_photon_rate_per_s: float
+    two_photon_mode: str
+
+    def background(self, log_scale: float) -> Background:
+        """Background quantities at s = ln a."""
+        redshift = math.expm1(-log_scale)
+        return Background(
+            float(self.cosmology.radiation_temperature_k(redshift)),
+            float(self.cosmology.hydrogen_density_cm3(redshift)),
+            float(self.cosmology.hubble_rate_per_s(redshift)),
+            -float(self.cosmology.hubble_log_slope(redshift)),
+        )
+
+    def local(self, log_scale: float, state: FloatArray) -> Local:
+        """Solve the kept levels at one time and state."""
+        around = self.background(log_scale)
+        ionized, neutral = ionized_and_neutral(float(state[0]))
+        conditions = Conditions(
+            around.radiation_temperature_k,
+            around.radiation_temperature_k * math.exp(state[1]),
+            around.hydrogen_density_cm3,
+            around.hubble_rate_per_s,
+            ionized,
+            ionized,
+            neutral,
+        )
+        kept = self.reduced.kept
+        rates = self.reduced.rates(
+            conditions.radiation_temperature_k, conditions.matter_temperature_k
+        )
+        coupling = combine(
+            self.treatment.couple(self.lines, kept, conditions, None, 0.0),
+            two_photon_coupling(
+                kept, conditions, self.two_photon_rate_per_s, self.two_photon_mode
+            ),
+        )
+        return Local(conditions, rates, coupling, solve_kept(kept, rates, coupling, conditions))
+
+    def rate(self, log_scale: float, state: FloatArray) -> FloatArray:
+        """(du/ds, dv/ds)."""
+        here = self.local(log_scale, state)
+        c = here.conditions
+        return np.array(
+            [
+                -here.solution.net_flow
+                / (c.hubble_rate_per_s * c.ionized_fraction * c.ground_fraction),
+                -1.0 + self._compton_per_hubble(c) * math.expm1(-state[1]),
+            ]
+        )
+
+    def jacobian(self, log_scale: float, state: FloatArray) -> tuple[FloatArray, FloatArray]:
+        """Derivatives of the rates by the state, shape (2, 2), and by s, shape (2,)."""
+        here = self.local(log_scale, state)
+        c, flow = here.conditions, here.solution.net_flow
+        slopes = flow_slopes(self.reduced.kept, here.rates, here.coupling, c, here.solution)
+        hubble_slope = self.background(log_scale).hubble_slope
+        scale = -1.0 / (c.hubble_rate_per_s * c.ionized_fraction * c.ground_fraction)
+        by_odds, by_time = self._flow_derivatives(slopes, c, flow, hubble_slope)
+        compton = self._compton_per_hubble(c)
+        cooling = compton * math.expm1(-state[1])
+        helium = self.cosmology.helium_ratio()
+        by_electrons = (1.0 + helium) / (1.0 + helium + c.electron_fraction)
+        matrix = np.array(
+            [
+                [scale * by_odds, scale * slopes.ln_matter_temperature],
+                [cooling * by_electrons * c.ground_fraction, -compton * math.exp(-state[1])],
+            ]
+        )
+        drift = np.array([scale * by_time, cooling * (-4.0 - hubble_slope)])
+        return matrix, drift
+
+    def _flow_derivatives(
+        self, slopes: FlowSlopes, c: Conditions, flow: float, hubble_slope: float
+    ) -> tuple[float, float]:
+        """Derivatives of F, less what the prefactor 1/(H x_HII x_HI) takes, by u and by s."""
+        ionized = slopes.ln_electron_fraction + slopes.ln_ionized_fraction
+        by_odds = (
+            c.ground_fraction * (ionized - flow)
+            - c.ionized_fraction * (slopes.ln_ground_fraction - flow)
+        )
+        by_time = (
+            -slopes.ln_radiation_temperature
+            - slopes.ln_matter_temperature
+            - 3.0 * slopes.ln_hydrogen_density
+            + hubble_slope * (slopes.ln_hubble_rate - flow)
+        )
+        return by_odds, by_time
+
+    def _compton_per_hubble(self, c: Conditions) -> float:
+        rate = compton_rate_per_s(
+            c.radiation_temperature_k, c.electron_fraction, self.cosmology.helium_ratio()
+        )
+        return float(rate) / c.hubble_rate_per_s

@@ -1,0 +1,208 @@
+"""From integrated slow variables to a History: populations, channels, line figures, observables."""
+
+from __future__ import annotations
+
+import math
+from typing import TYPE_CHECKING, NamedTuple
+
+import numpy as np
+from scipy.interpolate import CubicHermiteSpline, CubicSpline
+
+from .. import constants as const
+from ..arrays import FloatArray
+from ..background.conditions import Conditions
+from ..errors import Outcome
+from ..network.assembly import Workspace, factor_interior
+from ..network.populations import LevelPopulations, populations
+from ..network.reduction import TabulatedReduction
+from ..numerics.stepping import Trajectory
+from .equations import Local, SlowEquations, ionized_and_neutral
+from .observables import Visibility, dense_growth, milestones, visibility
+from .result import Channels, Diagnostics, History, LineFigures, SpeciesPopulations
+from .setup import Setup
+from .start import equilibrium_state
+
+if TYPE_CHECKING:
+    from .run import Integrated, Progress
+
+_SMALLEST_LOG = math.log(1e-300)
+SLOW_RELAXATION = 100.0
+"""Relaxation rate of the kept levels over the Hubble rate below which "quasi-steady" is doubtful."""
+
+
+class _Output(NamedTuple):
+    """Everything at one output redshift."""
+
+    local: Local
+    levels: LevelPopulations
+    relaxation_hubble: float
+
+
+def assemble_history(
+    setup: Setup, integrated: Integrated, notes: tuple[str, ...], tell: Progress
+) -> History:
+    """Work out all that was asked from the slow variables.
+
+    Where the integration ended early the history ends there, with the outcome saying why.
+    """
+    trajectory = integrated.trajectory
+    reached = -np.log1p(integrated.redshift) <= trajectory.time[-1] + 1e-12
+    reached |= integrated.redshift >= integrated.handover.redshift
+    redshift = integrated.redshift[reached]
+    outputs = _outputs(integrated, redshift, tell)
+    slowest = min((o.relaxation_hubble for o in outputs), default=math.inf)
+    outcome = trajectory.outcome
+    if outcome.ok and slowest < SLOW_RELAXATION:
+        outcome = Outcome.QUASI_STEADY_LOST
+    seen = _visibility(integrated, redshift)
+    growth = np.log1p(redshift)
+    conditions = [o.local.conditions for o in outputs]
+    ionized = np.array([c.ionized_fraction for c in conditions])
+    nothing = np.zeros(len(redshift))
+    return History(
+        setup,
+        outcome,
+        redshift,
+        np.array([c.electron_fraction for c in conditions]),
+        ionized,
+        np.array([c.ground_fraction for c in conditions]),
+        nothing + 1.0,
+        nothing,
+        nothing,
+        np.array([c.matter_temperature_k for c in conditions]),
+        np.array([c.radiation_temperature_k for c in conditions]),
+        np.array([c.hydrogen_density_cm3 for c in conditions]),
+        np.array([c.hubble_rate_per_s for c in conditions]),
+        setup.cosmology.cosmic_time_s(redshift),
+        np.maximum(seen.optical_depth(growth), 0.0),
+        np.exp(seen.log_visibility(growth)),
+        (_species(integrated, outputs),),
+        _channels(integrated, redshift, outputs),
+        _line_figures(integrated, outputs),
+        milestones(setup.cosmology, seen),
+        _diagnostics(integrated, outputs, slowest),
+        notes,
+    )
+
+
+def state_at(integrated: Integrated, log_scale: float) -> FloatArray:
+    """Slow variables at one time: equilibrium above the hand-over, the integrated ones below."""
+    if log_scale <= -math.log1p(integrated.handover.redshift):
+        return equilibrium_state(integrated.equations, log_scale)[0]
+    trajectory = integrated.trajectory
+    nearest = int(np.argmin(np.abs(trajectory.time - log_scale)))
+    return trajectory.state[nearest]
+
+
+def _outputs(integrated: Integrated, redshift: FloatArray, tell: Progress) -> list[_Output]:
+    equations, work = integrated.equations, Workspace.of(integrated.ladder)
+    found = []
+    for k, z in enumerate(redshift.tolist()):
+        log_scale = -math.log1p(z)
+        local = equations.local(log_scale, state_at(integrated, log_scale))
+        factored = factor_interior(
+            integrated.ladder, local.conditions.radiation_temperature_k, work
+        )
+        levels = populations(factored, local.solution.log_population, local.conditions)
+        relaxation = local.solution.slowest_relaxation() / local.conditions.hubble_rate_per_s
+        found.append(_Output(local, levels, relaxation))
+        tell("level populations", (k + 1) / len(redshift))
+    return found
+
+
+def _visibility(integrated: Integrated, redshift: FloatArray) -> Visibility:
+    """Optical depth and visibility on a dense grid over the whole range."""
+    handover = math.log1p(integrated.handover.redshift)
+    low = float(np.log1p(redshift[-1]))
+    log_growth = dense_growth(low, max(handover, float(np.log1p(redshift[0]))))
+    log_odds = np.empty(len(log_growth))
+    below = log_growth < handover
+    trajectory = integrated.trajectory
+    if below.any():
+        curve = CubicHermiteSpline(trajectory.time, trajectory.state[:, 0], trajectory.rate[:, 0])
+        log_odds[below] = curve(-log_growth[below])
+    for k in np.flatnonzero(~below):
+        log_odds[k] = equilibrium_state(integrated.equations, -log_growth[k])[0][0]
+    electrons = np.array([ionized_and_neutral(u)[0] for u in log_odds.tolist()])
+    return visibility(integrated.equations.cosmology, log_growth, electrons)
+
+
+def _species(integrated: Integrated, outputs: list[_Output]) -> SpeciesPopulations:
+    log_population = np.array([o.levels.log_population for o in outputs])
+    population = np.where(log_population < _SMALLEST_LOG, 0.0, np.exp(log_population))
+    log_departure = np.array([o.levels.log_departure for o in outputs])
+    ladder = integrated.ladder
+    return SpeciesPopulations(ladder.species, ladder.levels, population, log_departure)
+
+
+def _channels(integrated: Integrated, redshift: FloatArray, outputs: list[_Output]) -> Channels:
+    kept = integrated.ladder.kept
+    names = tuple(
+        f"{n}{'sp'[l]}-1s" for n, l in zip(kept.n.tolist(), kept.l.tolist(), strict=True)
+    )
+    net = np.array([o.local.solution.flow for o in outputs])
+    share = net / net.sum(axis=1, keepdims=True)
+    cumulative = _cumulative(integrated.equations, integrated.trajectory)(-np.log1p(redshift))
+    total = cumulative.sum(axis=1, keepdims=True)
+    # Above the hand-over nothing has been added up yet: the share of that moment stands in.
+    begun = total > 0.0
+    cumulative = np.where(begun, cumulative / np.where(begun, total, 1.0), share)
+    return Channels(names, net, share, cumulative)
+
+
+def _cumulative(equations: SlowEquations, trajectory: Trajectory) -> CubicSpline:
+    """Net recombinations per hydrogen nucleus since the hand-over, by channel, over ln a."""
+    flows = []
+    for s, state in zip(trajectory.time.tolist(), trajectory.state, strict=True):
+        local = equations.local(s, state)
+        flows.append(local.solution.flow / local.conditions.hubble_rate_per_s)
+    if len(flows) < 2:
+        return lambda s: np.zeros((len(s), len(equations.reduced.kept)))
+    total = CubicSpline(trajectory.time, np.array(flows)).antiderivative()
+    return lambda s: total(np.maximum(s, trajectory.time[0]))
+
+
+def _line_figures(integrated: Integrated, outputs: list[_Output]) -> LineFigures:
+    lines = integrated.equations.lines
+    depth, chance, damping, crossing = [], [], [], []
+    for output in outputs:
+        figures, conditions = output.local.coupling.validity, output.local.conditions
+        doppler = doppler_width(conditions)
+        natural = lines.decay_rate_per_s / (4.0 * np.pi * doppler * lines.energy_ev / const.PLANCK_EV_S)
+        depth.append(figures["optical_depth"])
+        chance.append(figures["escape_probability"])
+        damping.append(natural)
+        # A Lorentz wing is thick out to a tau / pi Doppler widths, the core to sqrt(ln tau).
+        core = np.sqrt(np.log(np.maximum(figures["optical_depth"], 1.0)))
+        wing = natural * figures["optical_depth"] / np.pi
+        crossing.append(2.0 * doppler * np.maximum(core, wing))
+    return LineFigures(
+        lines.names, np.array(depth), np.array(chance), np.array(damping), np.array(crossing)
+    )
+
+
+def doppler_width(conditions: Conditions) -> float:
+    """Doppler width over frequency of a hydrogen line, sqrt(2 k T_m / m_H) / c."""
+    speed = math.sqrt(
+        2.0
+        * const.BOLTZMANN_ERG_K
+        * conditions.matter_temperature_k
+        / const.HYDROGEN_ATOM_MASS_G
+    )
+    return speed / const.SPEED_OF_LIGHT_CM_S
+
+
+def _diagnostics(integrated: Integrated, outputs: list[_Output], slowest: float) -> Diagnostics:
+    trajectory, reduced = integrated.trajectory, integrated.equations.reduced
+    tabulated = isinstance(reduced, TabulatedReduction)
+    return Diagnostics(
+        integrated.handover.redshift,
+        integrated.handover.departure,
+        len(trajectory.time) - 1,
+        trajectory.rejected,
+        trajectory.evaluations,
+        reduced.n_nodes if tabulated else 0,
+        reduced.interpolation_error if tabulated else 0.0,
+        max((o.levels.conservation_error for o in outputs), default=0.0),
+        slowest,
+    )

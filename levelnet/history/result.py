@@ -1,0 +1,321 @@
+"""What a run gives back: the ionization history, level populations, lines, and how it went."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import TYPE_CHECKING, Any
+
+from ..arrays import FloatArray, frozen_array
+from ..atomic.levels import LevelSet
+from ..errors import InputError, Outcome, SolveError
+from .setup import Setup
+
+if TYPE_CHECKING:
+    import xarray
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class SpeciesPopulations:
+    """Level populations of one species at every output redshift.
+
+    Attributes
+    ----------
+    name : str
+        The species, "H I".
+    levels : LevelSet
+        Quantum numbers, weights and energies, shape (n_levels,).
+    population : ndarray, shape (n_redshift, n_levels), dimensionless
+        Atoms in the level per hydrogen nucleus; below 1e-300 it is 0 by statement.
+    log_departure : ndarray, shape (n_redshift, n_levels), dimensionless
+        Natural logarithm of the departure coefficient b = x / x_Saha, with x_Saha the
+        Saha-Boltzmann population at T_m with the actual n_e and n_ion. Always finite.
+    """
+
+    name: str
+    levels: LevelSet
+    population: FloatArray
+    log_departure: FloatArray
+
+    def __post_init__(self) -> None:
+        """Check shapes and make every array read-only."""
+        shape = (len(self.population), len(self.levels))
+        frozen_array(self, "population", shape)
+        frozen_array(self, "log_departure", shape)
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Channels:
+    """How the recombined atoms reached the ground state.
+
+    Attributes
+    ----------
+    names : tuple of str
+        "2s-1s" (two photons), then the Lyman lines that exchange photons: "2p-1s", "3p-1s", ...
+    net_rate_per_s : ndarray, shape (n_redshift, n_channels), s^-1
+        Net transitions to the ground state per hydrogen nucleus.
+    share : ndarray, shape (n_redshift, n_channels), dimensionless
+        Each channel's part of the net rate at that redshift; sums to 1.
+    cumulative_share : ndarray, shape (n_redshift, n_channels), dimensionless
+        Each channel's part of all net recombinations since the start of the integration; sums to 1.
+    """
+
+    names: tuple[str, ...]
+    net_rate_per_s: FloatArray
+    share: FloatArray
+    cumulative_share: FloatArray
+
+    def __post_init__(self) -> None:
+        """Check shapes and make every array read-only."""
+        shape = (len(self.share), len(self.names))
+        for name in ("net_rate_per_s", "share", "cumulative_share"):
+            frozen_array(self, name, shape)
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class LineFigures:
+    """Validity figures of the line-escape treatment, per line and redshift.
+
+    Attributes
+    ----------
+    names : tuple of str
+        The lines: "2p-1s" (Lyman-alpha), "3p-1s", ...
+    optical_depth : ndarray, shape (n_redshift, n_lines), dimensionless
+        Sobolev optical depth.
+    escape_probability : ndarray, shape (n_redshift, n_lines), dimensionless
+        Chance that a photon of the line escapes, as the treatment has it.
+    damping_parameter : ndarray, shape (n_redshift, n_lines), dimensionless
+        Voigt parameter: total decay rate over 4 pi times the Doppler width.
+    crossing_time_hubble : ndarray, shape (n_redshift, n_lines), dimensionless
+        Time to redshift across the width where the line is optically thick, in Hubble times; the
+        treatment assumes it is far below 1.
+    """
+
+    names: tuple[str, ...]
+    optical_depth: FloatArray
+    escape_probability: FloatArray
+    damping_parameter: FloatArray
+    crossing_time_hubble: FloatArray
+
+    def __post_init__(self) -> None:
+        """Check shapes and make every array read-only."""
+        shape = (len(self.optical_depth), len(self.names))
+        for name in (
+            "optical_depth",
+            "escape_probability",
+            "damping_parameter",
+            "crossing_time_hubble",
+        ):
+            frozen_array(self, name, shape)
+
+
+@dataclass(frozen=True, slots=True)
+class Milestones:
+    """Numbers that sum up a history; NaN where the grid does not reach the event.
+
+    All integrals run over the integrated range only, from the lowest output redshift up; there is no
+    reionization in them. Definitions: g(eta) = (d tau/d eta) exp(-tau), eta conformal time.
+
+    Attributes
+    ----------
+    last_scattering_redshift : float
+        z_* where the optical depth from `redshift_end` is 1.
+    visibility_peak_redshift : float
+        Where g(eta) peaks.
+    visibility_width : float
+        Full width at half maximum of g(eta), in redshift.
+    half_ionized_redshift : float
+        Where x_e = 0.5 (hydrogen).
+    last_scattering_time_s : float
+        Cosmic time at z_*, s.
+    """
+
+    last_scattering_redshift: float
+    visibility_peak_redshift: float
+    visibility_width: float
+    half_ionized_redshift: float
+    last_scattering_time_s: float
+
+
+@dataclass(frozen=True, slots=True)
+class Diagnostics:
+    """How the run went.
+
+    Attributes
+    ----------
+    handover_redshift : float
+        Where Saha equilibrium hands over to the integration.
+    handover_departure : float
+        Relative difference there between the neutral fraction in Saha equilibrium and the
+        quasi-steady one the equations ask for.
+    steps, rejected_steps, evaluations : int
+        Counts of the integration.
+    nodes : int
+        Reductions of the network at Chebyshev nodes in ln T_r (0 in direct mode).
+    interpolation_error : float
+        Largest error, off the nodes, of the ln of any reduced rate that matters (0 in direct mode).
+    conservation_error : float
+        Largest relative imbalance of the populations at the output redshifts.
+    slowest_relaxation_hubble : float
+        Slowest relaxation rate of the kept levels over the Hubble rate, smallest over the outputs; the
+        quasi-steady assumption needs it far above 1.
+    """
+
+    handover_redshift: float
+    handover_departure: float
+    steps: int
+    rejected_steps: int
+    evaluations: int
+    nodes: int
+    interpolation_error: float
+    conservation_error: float
+    slowest_relaxation_hubble: float
+
+
+_HISTORY_ARRAYS = (
+    "redshift",
+    "free_electron_fraction",
+    "ionized_hydrogen_fraction",
+    "neutral_hydrogen_fraction",
+    "neutral_helium_fraction",
+    "singly_ionized_helium_fraction",
+    "doubly_ionized_helium_fraction",
+    "matter_temperature_k",
+    "radiation_temperature_k",
+    "hydrogen_density_cm3",
+    "hubble_rate_per_s",
+    "cosmic_time_s",
+    "optical_depth",
+    "visibility",
+)
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class History:
+    """One ionization history; every array has shape (n_redshift,), redshift descending.
+
+    Attributes
+    ----------
+    setup : Setup
+        What was asked.
+    outcome : Outcome
+        How it ended.
+    redshift : ndarray, dimensionless
+        Output redshifts, descending.
+    free_electron_fraction : ndarray, dimensionless
+        n_e / n_H, all hydrogen nuclei.
+    ionized_hydrogen_fraction, neutral_hydrogen_fraction : ndarray, dimensionless
+        Of hydrogen nuclei; both to full relative precision, neither formed as 1 - x.
+    neutral_helium_fraction, singly_ionized_helium_fraction, doubly_ionized_helium_fraction : ndarray
+        Of helium nuclei, dimensionless.
+    matter_temperature_k, radiation_temperature_k : ndarray, K
+        Temperatures.
+    hydrogen_density_cm3 : ndarray, cm^-3
+        All hydrogen nuclei.
+    hubble_rate_per_s : ndarray, s^-1
+        Expansion rate.
+    cosmic_time_s : ndarray, s
+        Time since the Big Bang.
+    optical_depth : ndarray, dimensionless
+        Thomson optical depth from `redshift_end` up to this redshift; no reionization.
+    visibility : ndarray, Mpc^-1
+        g(eta) = (d tau / d eta) exp(-tau) per comoving megaparsec.
+    species : tuple of SpeciesPopulations
+        Level populations.
+    channels : Channels
+        How atoms reached the ground state.
+    lines : LineFigures
+        Validity of the line treatment.
+    milestones : Milestones
+        Numbers that sum it up.
+    diagnostics : Diagnostics
+        How the run went.
+    notes : tuple of str
+        What a user must know before relying on the result.
+    """
+
+    setup: Setup
+    outcome: Outcome
+    redshift: FloatArray
+    free_electron_fraction: FloatArray
+    ionized_hydrogen_fraction: FloatArray
+    neutral_hydrogen_fraction: FloatArray
+    neutral_helium_fraction: FloatArray
+    singly_ionized_helium_fraction: FloatArray
+    doubly_ionized_helium_fraction: FloatArray
+    matter_temperature_k: FloatArray
+    radiation_temperature_k: FloatArray
+    hydrogen_density_cm3: FloatArray
+    hubble_rate_per_s: FloatArray
+    cosmic_time_s: FloatArray
+    optical_depth: FloatArray
+    visibility: FloatArray
+    species: tuple[SpeciesPopulations, ...]
+    channels: Channels
+    lines: LineFigures
+    milestones: Milestones
+    diagnostics: Diagnostics
+    notes: tuple[str, ...] = ()
+
+    def __post_init__(self) -> None:
+        """Check shapes and make every array read-only."""
+        for name in _HISTORY_ARRAYS:
+            frozen_array(self, name, (len(self.redshift),))
+
+    def require_converged(self) -> None:
+        """Raise SolveError, carrying this history, unless the outcome is CONVERGED."""
+        if not self.outcome.ok:
+            raise SolveError(self.outcome.value, self)
+
+    def populations(self, species: str) -> FloatArray:
+        """Populations per hydrogen nucleus of `species` ("H I"), shape (n_redshift, n_levels)."""
+        return self._species(species).population
+
+    def log_departures(self, species: str) -> FloatArray:
+        """Natural log of the departure coefficients, shape (n_redshift, n_levels)."""
+        return self._species(species).log_departure
+
+    def levels(self, species: str) -> LevelSet:
+        """Quantum numbers, weights and energies of the levels of `species`."""
+        return self._species(species).levels
+
+    def _species(self, name: str) -> SpeciesPopulations:
+        for one in self.species:
+            if one.name == name:
+                return one
+        known = ", ".join(f'"{one.name}"' for one in self.species)
+        raise InputError(f'species "{name}": not in this history; known: {known or "none"}')
+
+    def to_xarray(self) -> xarray.Dataset:
+        """The arrays over redshift as an xarray Dataset (needs the xarray extra)."""
+        import xarray
+
+        arrays: dict[str, Any] = {
+            name: ("redshift", getattr(self, name)) for name in _HISTORY_ARRAYS[1:]
+        }
+        return xarray.Dataset(arrays, coords={"redshift": self.redshift})
+
+    def __repr__(self) -> str:
+        """One line: the range, the size, the outcome."""
+        return (
+            f"<History z = {self.redshift[0]:g} to {self.redshift[-1]:g}, "
+            f"{len(self.redshift)} redshifts, hydrogen n_max = {self.setup.hydrogen.n_max}, "
+            f"z_* = {self.milestones.last_scattering_redshift:.2f}: {self.outcome.value}>"
+        )
+
+    def _repr_html_(self) -> str:
+        """Show a small table in a notebook."""
+        rows = "".join(
+            f"<tr><td>{z:.1f}</td><td>{x:.6g}</td><td>{t:.6g}</td></tr>"
+            for z, x, t in zip(
+                self.redshift[:: max(1, len(self.redshift) // 10)],
+                self.free_electron_fraction[:: max(1, len(self.redshift) // 10)],
+                self.matter_temperature_k[:: max(1, len(self.redshift) // 10)],
+                strict=True,
+            )
+        )
+        from html import escape
+
+        return (
+            f"<table><caption>{escape(repr(self))}</caption>"
+            f"<tr><th>z</th><th>x_e</th><th>T_m (K)</th></tr>{rows}</table>"
+        )

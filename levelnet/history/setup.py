@@ -1,0 +1,177 @@
+"""The chosen parts of one run: built in Python or read from a TOML file, and written back."""
+
+from __future__ import annotations
+
+import dataclasses
+import hashlib
+import tomllib
+from collections.abc import Mapping
+from pathlib import Path
+from typing import Annotated, Any
+
+from pydantic import Field
+
+from ..atomic.species import Helium, Hydrogen
+from ..background.cosmology import Cosmology
+from ..errors import InputError
+from ..escape.lines import Lines
+from ..records import build, checked_record, from_mapping
+
+
+@checked_record
+class Grid:
+    """Where the history is delivered.
+
+    Parameters
+    ----------
+    redshift_start, redshift_end : float, dimensionless
+        First (highest) and last redshift of the output. The integration itself always starts in Saha
+        equilibrium, at a redshift it chooses and reports.
+    n_redshifts : int, 2 to 100000
+        Number of output redshifts, evenly spaced in ln(1 + z), where `redshifts` is not given.
+    redshifts : tuple of float, dimensionless, or None
+        Output redshifts, in any order, each hit exactly; they must lie between start and end.
+    """
+
+    redshift_start: Annotated[float, Field(gt=0.0, le=10_000.0)] = 1800.0
+    redshift_end: Annotated[float, Field(ge=0.0, lt=10_000.0)] = 20.0
+    n_redshifts: Annotated[int, Field(ge=2, le=100_000)] = 200
+    redshifts: tuple[float, ...] | None = None
+
+    def __post_init__(self) -> None:
+        """Check the rules about several fields."""
+        if self.redshift_end >= self.redshift_start:
+            raise ValueError(
+                f"redshift_end = {self.redshift_end:g} must be below "
+                f"redshift_start = {self.redshift_start:g}"
+            )
+        for redshift in self.redshifts or ():
+            if not self.redshift_end <= redshift <= self.redshift_start:
+                raise ValueError(
+                    f"redshifts: {redshift:g} lies outside redshift_end = {self.redshift_end:g} "
+                    f"to redshift_start = {self.redshift_start:g}"
+                )
+        if self.redshifts is not None and len(set(self.redshifts)) < 2:
+            raise ValueError("redshifts: at least two different values are needed")
+
+
+@checked_record
+class Accuracy:
+    """How exactly the history is computed.
+
+    Parameters
+    ----------
+    relative : float, 1e-9 to 1e-3 (dimensionless)
+        Largest relative error of the slow variables (ionized and neutral fraction, T_m) from stepping
+        and from interpolating the reduced network.
+    max_steps : int, 10 to 1000000
+        Limit on the number of steps.
+    interpolate : bool
+        True: reduce the network at Chebyshev nodes in ln T_r and interpolate. False: reduce it at every
+        evaluation (slow; for checking).
+    """
+
+    relative: Annotated[float, Field(ge=1e-9, le=1e-3)] = 1e-6
+    max_steps: Annotated[int, Field(ge=10, le=1_000_000)] = 100_000
+    interpolate: bool = True
+
+
+@checked_record
+class Setup:
+    """Everything that defines one run.
+
+    Parameters
+    ----------
+    cosmology : Cosmology
+        The expanding universe.
+    hydrogen : Hydrogen
+        The hydrogen atom.
+    helium : Helium, optional
+        The helium atom; inert for now.
+    lines : Lines, optional
+        How line photons escape.
+    grid : Grid, optional
+        Output redshifts.
+    accuracy : Accuracy, optional
+        Tolerances.
+    title : str, optional
+        Any text; stored with the result.
+
+    Notes
+    -----
+    Each part may also be given as a plain mapping. Bad values raise one InputError that lists all.
+    """
+
+    cosmology: Annotated[Cosmology, from_mapping(Cosmology)]
+    hydrogen: Annotated[Hydrogen, from_mapping(Hydrogen)]
+    helium: Annotated[Helium, from_mapping(Helium)] = Helium()  # noqa: RUF009 (frozen)
+    lines: Annotated[Lines, from_mapping(Lines)] = Lines()  # noqa: RUF009
+    grid: Annotated[Grid, from_mapping(Grid)] = Grid()  # noqa: RUF009
+    accuracy: Annotated[Accuracy, from_mapping(Accuracy)] = Accuracy()  # noqa: RUF009
+    title: str = ""
+
+    def __post_init__(self) -> None:
+        """Check the rules about several parts."""
+        count, n_max = self.lines.lyman_lines, self.hydrogen.n_max
+        if isinstance(count, int) and count > n_max - 1:
+            raise ValueError(
+                f"lines.lyman_lines = {count}: hydrogen.n_max = {n_max} has only {n_max - 1} Lyman lines"
+            )
+
+    def to_toml(self) -> str:
+        """Write the setup as TOML text; :func:`parse_setup` gives it back equal."""
+        import tomli_w
+
+        return tomli_w.dumps(_plain(dataclasses.asdict(self)))
+
+    @property
+    def digest(self) -> str:
+        """Sixteen hexadecimal digits that name this setup."""
+        return hashlib.sha256(self.to_toml().encode()).hexdigest()[:16]
+
+
+def _plain(values: Mapping[str, Any]) -> dict[str, Any]:
+    """Drop what is not set (TOML has no null); scalars before tables, as TOML wants."""
+    kept = {key: value for key, value in values.items() if value is not None}
+    scalars = {k: v for k, v in kept.items() if not isinstance(v, Mapping)}
+    tables = {k: _plain(v) for k, v in kept.items() if isinstance(v, Mapping)}
+    return {k: list(v) if isinstance(v, tuple) else v for k, v in scalars.items()} | tables
+
+
+def parse_setup(text: str, where: str = "setup") -> Setup:
+    """Read a setup from TOML text; every complaint is listed at once with its path."""
+    try:
+        values = tomllib.loads(text)
+    except tomllib.TOMLDecodeError as error:
+        raise InputError(f"{where}: not valid TOML: {error}") from None
+    try:
+        return build(Setup, values)
+    except InputError as error:
+        raise InputError(f"{where}: {error}") from None
+
+
+def load_setup(path: str | Path) -> Setup:
+    """Read a setup file.
+
+    Parameters
+    ----------
+    path : str or Path
+        A TOML file.
+
+    Returns
+    -------
+    Setup
+        The chosen parts.
+
+    Raises
+    ------
+    InputError
+        If the file cannot be read or any key is unknown, missing, of the wrong type or out of range;
+        the text lists every complaint with its path.
+    """
+    try:
+        text = Path(path).read_text(encoding="utf-8")
+    except (OSError, UnicodeDecodeError) as error:
+        reason = error.strerror if isinstance(error, OSError) else "not UTF-8 text"
+        raise InputError(f"{path}: cannot be read: {reason}") from None
+    return parse_setup(text, str(path))

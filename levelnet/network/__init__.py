@@ -1,0 +1,1 @@
+"""From rates to populations at one redshift."""

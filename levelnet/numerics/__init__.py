@@ -1,0 +1,1 @@
+"""Algorithms that know no physics."""

@@ -1,0 +1,188 @@
+"""Block Cholesky of a symmetric, positive definite, block-tridiagonal M-matrix that conserves.
+
+The matrix is H = I - (B + B^T) with B >= 0 between neighbouring blocks, known only through B and a
+positive vector v with H v = c >= 0: v is the equilibrium, c what leaks out. Elimination runs from the
+last block to the first. Each eliminated block adds terms of one sign to the off-diagonals of the next,
+and the next diagonal is formed as the sum of what flows out of each unknown, so that nothing is ever
+subtracted and what the elimination conserves it conserves to rounding: the block form of the idea of
+Grassmann, Taksar & Heyman 1985, Oper. Res. 33, 1107.
+
+    S_last = I;  S_{l+1} = L L^T;  X = B_l L^-T;  offdiag(S_l) = -X X^T;  c_l <- c_l + X L^-1 c_{l+1}
+    S_l,ii = [c_l,i + (B_{l-1}^T v_{l-1})_i + sum_{j != i} |S_l,ij| v_j] / v_i
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+from scipy.linalg import blas, lapack
+
+from ..arrays import FloatArray
+from ..errors import Outcome, SolveError
+from ..kernels import small
+from .block_system import BlockShape
+
+# Up to this block size one compiled routine beats a library call per block.
+SMALL_BLOCK = 40
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class BlockCholesky:
+    """A factored H: solve for any number of right sides with it.
+
+    Attributes
+    ----------
+    shape : BlockShape
+        Blocks.
+    coupling : ndarray, shape (shape.n_couplings,)
+        X = B L^-T of every block.
+    factor : ndarray, shape (shape.n_factors,)
+        Lower triangles L of every block.
+    """
+
+    shape: BlockShape
+    coupling: FloatArray
+    factor: FloatArray
+
+    def solve(self, right: FloatArray) -> FloatArray:
+        """Solve H x = r.
+
+        Parameters
+        ----------
+        right : ndarray, shape (n_right, n_unknowns)
+            Right sides; nonnegative ones keep every component relatively accurate.
+
+        Returns
+        -------
+        ndarray, shape (n_right, n_unknowns)
+            The solutions. H is symmetric, so they solve the transposed system too.
+        """
+        x = np.array(right, dtype=np.float64)
+        shape = self.shape
+        if _is_small(shape):
+            small.solve_small(*_layout(shape), self.coupling, self.factor, x)
+            return x
+        _substitute_down(self, x)
+        _substitute_up(self, x)
+        return x
+
+
+def factor_symmetric(
+    shape: BlockShape,
+    coupling: FloatArray,
+    weight: FloatArray,
+    outflow: FloatArray,
+    excess: FloatArray,
+    factor: FloatArray | None = None,
+) -> BlockCholesky:
+    """Factor H = I - (B + B^T).
+
+    Parameters
+    ----------
+    shape : BlockShape
+        Blocks.
+    coupling : ndarray, shape (shape.n_couplings,)
+        B, nonnegative; overwritten and kept by the result.
+    weight : ndarray, shape (n_unknowns,)
+        The positive vector v.
+    outflow : ndarray, shape (n_unknowns,)
+        (B_{l-1}^T v_{l-1}): what each unknown of block l sends to block l - 1.
+    excess : ndarray, shape (n_unknowns,)
+        c = H v, nonnegative.
+    factor : ndarray, shape (shape.n_factors,), optional
+        Buffer to reuse; touching fresh memory costs more than the arithmetic of small blocks.
+
+    Returns
+    -------
+    BlockCholesky
+        The factors.
+
+    Raises
+    ------
+    SolveError
+        If a block is not positive definite (an unknown without exit).
+    """
+    factor = np.empty(shape.n_factors) if factor is None else factor
+    carried = excess.copy()
+    if _is_small(shape):
+        status = small.factor_small(
+            *_layout(shape), weight, outflow, carried, coupling, factor
+        )
+        if status:
+            raise SolveError(f"{Outcome.SINGULAR.value} (block l = {status - 1})")
+    else:
+        _factor_large(shape, coupling, weight, outflow, carried, factor)
+    return BlockCholesky(shape, coupling, factor)
+
+
+def _is_small(shape: BlockShape) -> bool:
+    return int(shape.size.max(initial=0)) <= SMALL_BLOCK
+
+
+def _layout(shape: BlockShape) -> tuple[Any, ...]:
+    return shape.size, shape.start, shape.coupling_start, shape.factor_start
+
+
+def _factor_large(
+    shape: BlockShape,
+    coupling: FloatArray,
+    weight: FloatArray,
+    outflow: FloatArray,
+    carried: FloatArray,
+    factor: FloatArray,
+) -> None:
+    for block in range(len(shape.size) - 1, -1, -1):
+        if not shape.size[block]:
+            continue
+        own = shape.factor(factor, block)
+        leak = shape.part(carried, block)
+        if block + 1 < len(shape.size) and shape.size[block + 1]:
+            lower = shape.factor(factor, block + 1)
+            rows = shape.coupling(coupling, block).T  # Fortran-ordered: B_l^T, in place
+            blas.dtrsm(1.0, lower, rows, lower=1, overwrite_b=1)
+            blas.dsyrk(-1.0, rows, beta=0.0, c=own, trans=1, lower=1, overwrite_c=1)
+            above = blas.dtrsv(lower, shape.part(carried, block + 1), lower=1)
+            leak += rows.T @ above
+        else:
+            own[...] = 0.0
+        diagonal = np.einsum("ii->i", own)
+        diagonal[...] = 0.0
+        v = shape.part(weight, block)
+        within = blas.dsymv(-1.0, own, v, lower=1)
+        diagonal[...] = (leak + shape.part(outflow, block) + within) / v
+        _, status = lapack.dpotrf(own, lower=1, clean=0, overwrite_a=1)
+        if status:
+            raise SolveError(f"{Outcome.SINGULAR.value} (block l = {block})")
+
+
+def _substitute_down(factored: BlockCholesky, x: FloatArray) -> None:
+    """Forward substitution, last block first: y_l = L^-1 (r_l + X_l y_{l+1})."""
+    shape = factored.shape
+    for block in range(len(shape.size) - 1, -1, -1):
+        own = shape.part(x, block)
+        if not own.size:
+            continue
+        if block + 1 < len(shape.size) and shape.size[block + 1]:
+            rows = shape.coupling(factored.coupling, block)
+            own += shape.part(x, block + 1) @ rows.T
+        _triangle(shape.factor(factored.factor, block), own, transposed=0)
+
+
+def _substitute_up(factored: BlockCholesky, x: FloatArray) -> None:
+    """Back substitution, first block first: x_l = L^-T (y_l + X_{l-1}^T x_{l-1})."""
+    shape = factored.shape
+    for block in range(len(shape.size)):
+        own = shape.part(x, block)
+        if not own.size:
+            continue
+        if block and shape.size[block - 1]:
+            rows = shape.coupling(factored.coupling, block - 1)
+            own += shape.part(x, block - 1) @ rows
+        _triangle(shape.factor(factored.factor, block), own, transposed=1)
+
+
+def _triangle(lower: FloatArray, right: FloatArray, transposed: int) -> None:
+    """Solve with one triangle in place; `right` has shape (n_right, size)."""
+    right[...] = blas.dtrsm(1.0, lower, right.T, lower=1, trans_a=transposed).T

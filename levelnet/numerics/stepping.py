@@ -1,0 +1,181 @@
+"""One error-controlled implicit step method: a six-stage Rosenbrock method of order 4(3).
+
+L-stable and stiffly accurate; one Jacobian and one factorization a step, no Newton iteration.
+
+References
+----------
+Hairer & Wanner 1996, Solving Ordinary Differential Equations II, 2nd ed., sec. IV.7 and IV.10 (method
+RODAS; coefficients from memory, held by the test of the observed order and of the order conditions).
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass
+
+import numpy as np
+from scipy.linalg import lapack
+
+from ..arrays import FloatArray
+from ..errors import Outcome
+
+Rate = Callable[[float, FloatArray], FloatArray]
+Jacobian = Callable[[float, FloatArray], tuple[FloatArray, FloatArray]]
+
+_GAMMA = 0.25
+_A = (
+    (),
+    (1.544000000000000,),
+    (0.9466785280815826, 0.2557011698983284),
+    (3.314825187068521, 2.896124015972201, 0.9986419139977817),
+    (1.221224509226641, 6.019134481288629, 12.53708332932087, -0.6878860361058950),
+)
+_C = (
+    (),
+    (-5.668800000000000,),
+    (-2.430093356833875, -0.2063599157091915),
+    (-0.1073529058151375, -9.594562251023355, -20.47028614809616),
+    (7.496443313967647, -10.24680431464352, -33.99990352819905, 11.70890893206160),
+    (8.083246795921522, -7.981132988064893, -31.52159432874371, 16.31930543123136, -6.058818238834054),
+)
+_NODE = (0.0, 0.386, 0.21, 0.63, 1.0, 1.0)
+_TIME = (0.25, -0.1043, 0.1035, -0.03620000000000023, 0.0, 0.0)
+ORDER = 4
+
+_SHRINK, _GROW, _SAFETY = 0.2, 5.0, 0.9
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Trajectory:
+    """Every accepted step of one integration.
+
+    Attributes
+    ----------
+    time : ndarray, shape (n_points,)
+        Start, every accepted step end; each asked output is one of them, exactly.
+    state, rate : ndarray, shape (n_points, n_variables)
+        The variables and their derivatives there.
+    outcome : Outcome
+        How it ended; where it is not CONVERGED the arrays end early.
+    rejected, evaluations : int
+        Steps thrown away; evaluations of the right-hand side, Jacobians counted as one.
+    """
+
+    time: FloatArray
+    state: FloatArray
+    rate: FloatArray
+    outcome: Outcome
+    rejected: int
+    evaluations: int
+
+
+def rosenbrock_step(
+    rate: Rate, jacobian: Jacobian, time: float, state: FloatArray, first: FloatArray, step: float
+) -> tuple[FloatArray, FloatArray]:
+    """Take one step.
+
+    Parameters
+    ----------
+    rate : callable
+        dy/dt = rate(t, y).
+    jacobian : callable
+        (d rate/d y, d rate/d t) at (t, y), shapes (n, n) and (n,).
+    time, state, first, step : float, ndarray (n,), ndarray (n,), float
+        Where the step starts, with first = rate(time, state), and its length.
+
+    Returns
+    -------
+    state, error : ndarray, shape (n,)
+        The state after the step, and its estimated error.
+    """
+    slope, drift = jacobian(time, state)
+    n = len(state)
+    lu, pivots, _ = lapack.dgetrf(np.eye(n) / (step * _GAMMA) - slope)
+    stages: list[FloatArray] = []
+    point = state
+    for k in range(6):
+        if k < 5:
+            point = state + sum((a * u for a, u in zip(_A[k], stages, strict=True)), np.zeros(n))
+        else:
+            point = point + stages[-1]
+        value = first if k == 0 else rate(time + _NODE[k] * step, point)
+        right = value + step * _TIME[k] * drift
+        for c, u in zip(_C[k], stages, strict=True):
+            right = right + (c / step) * u
+        stages.append(lapack.dgetrs(lu, pivots, right)[0])
+    return point + stages[-1], stages[-1]
+
+
+def integrate(
+    rate: Rate,
+    jacobian: Jacobian,
+    start: float,
+    state: FloatArray,
+    outputs: Sequence[float],
+    tolerance: float,
+    *,
+    first_step: float,
+    max_steps: int,
+    on_step: Callable[[float], None] | None = None,
+) -> Trajectory:
+    """Integrate to every output in turn, keeping the local error of each variable below `tolerance`.
+
+    Parameters
+    ----------
+    rate, jacobian : callable
+        As for :func:`rosenbrock_step`.
+    start : float
+        Initial time.
+    state : ndarray, shape (n,)
+        Initial variables; scaled so that one absolute tolerance serves them all.
+    outputs : sequence of float
+        Ascending times, all above `start`; steps end on each exactly.
+    tolerance : float
+        Largest absolute local error of any variable in one step.
+    first_step : float
+        Length of the first step tried.
+    max_steps : int
+        Limit on accepted plus rejected steps.
+    on_step : callable, optional
+        Told the time after every accepted step.
+
+    Returns
+    -------
+    Trajectory
+        Accepted points and the outcome.
+    """
+    now, y, step = start, np.asarray(state, dtype=np.float64), first_step
+    slope = rate(now, y)
+    times, states, slopes = [now], [y], [slope]
+    rejected, evaluations, outcome = 0, 1, Outcome.CONVERGED
+    for target in outputs:
+        while now < target and outcome.ok:
+            if len(times) + rejected > max_steps:
+                outcome = Outcome.STEP_LIMIT
+                break
+            # Stretch or split evenly rather than leave a sliver before the output.
+            pieces = max(1, int(np.ceil((target - now) / step - 0.1)))
+            trial = (target - now) / pieces
+            new, error = rosenbrock_step(rate, jacobian, now, y, slope, trial)
+            evaluations += 7
+            size = float(np.max(np.abs(error))) / tolerance
+            if not np.isfinite(size):
+                size = np.inf
+            factor = min(_GROW, max(_SHRINK, _SAFETY * max(size, 1e-12) ** -0.25))
+            if size > 1.0:
+                rejected += 1
+                step = trial * factor
+                if step < 1e-13 * max(1.0, abs(now)):
+                    outcome = Outcome.STEP_TOO_SMALL
+                continue
+            step = trial * factor if pieces > 1 or factor < 1.0 else max(step, trial * factor)
+            now = target if pieces == 1 else now + trial
+            y, slope = new, rate(now, new)
+            times.append(now)
+            states.append(y)
+            slopes.append(slope)
+            if on_step is not None:
+                on_step(now)
+    return Trajectory(
+        np.array(times), np.array(states), np.array(slopes), outcome, rejected, evaluations
+    )

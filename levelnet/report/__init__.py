@@ -1,0 +1,1 @@
+"""Figures of results: the only room that imports matplotlib."""

@@ -1,0 +1,109 @@
+"""All figures of a history as files: SVG and PDF, whole or not at all."""
+
+from __future__ import annotations
+
+import os
+import tempfile
+from pathlib import Path
+from typing import TYPE_CHECKING
+
+from ..errors import InputError
+from ..history.result import History
+from . import style
+from .departures import departure_curves_figure, departure_map_figure
+from .plots import channel_figure, history_figure, visibility_figure
+
+if TYPE_CHECKING:
+    from matplotlib.figure import Figure
+
+FIGURE_NAMES = ("history", "departure-map", "departure-curves", "channels", "visibility")
+
+
+def make_figures(history: History, redshift: float | None = None) -> dict[str, Figure]:
+    """Every figure of `history` by its name; `redshift` is that of the departure map.
+
+    Parameters
+    ----------
+    history : History
+        Any result.
+    redshift : float or None, dimensionless
+        The output nearest to it is drawn as the map; None takes the visibility peak.
+    """
+    made = (
+        history_figure(history),
+        departure_map_figure(history, redshift),
+        departure_curves_figure(history),
+        channel_figure(history),
+        visibility_figure(history),
+    )
+    return dict(zip(FIGURE_NAMES, made, strict=True))
+
+
+def figure_paths(folder: str | Path) -> tuple[Path, ...]:
+    """Files that :func:`save_figures` writes into `folder`."""
+    return tuple(Path(folder) / f"{name}.{end}" for name in FIGURE_NAMES for end in style.FORMATS)
+
+
+def save_figures(
+    history: History, folder: str | Path, force: bool = False, redshift: float | None = None
+) -> tuple[Path, ...]:
+    """Write all figures of `history` as SVG and PDF into `folder`, made where it is missing.
+
+    Parameters
+    ----------
+    history : History
+        Any result.
+    folder : str or Path
+        Where to.
+    force : bool
+        Replace figures that exist.
+    redshift : float or None, dimensionless
+        Redshift of the departure map.
+
+    Returns
+    -------
+    tuple of Path
+        The files. Equal histories give equal bytes (with the same matplotlib).
+
+    Raises
+    ------
+    InputError
+        If a file exists and `force` is not set, or `folder` is a file, or `redshift` is outside.
+    OSError
+        If a file cannot be written; none is left half-written.
+    """
+    paths = figure_paths(folder)
+    check_free(paths, force)
+    if Path(folder).exists() and not Path(folder).is_dir():
+        raise InputError(f"{folder}: is a file, not a folder")
+    # Drawn in memory first, so that a figure that fails leaves nothing behind.
+    figures = make_figures(history, redshift)
+    drawn = [style.render(figures[path.stem], path.suffix[1:]) for path in paths]
+    Path(folder).mkdir(parents=True, exist_ok=True)
+    for path, data in zip(paths, drawn, strict=True):
+        _write_bytes(path, data)
+    return paths
+
+
+def check_free(paths: tuple[Path, ...], force: bool) -> None:
+    """Raise InputError if one of `paths` exists and `force` is not set."""
+    for path in paths:
+        if path.exists() and not force:
+            raise InputError(f"{path}: exists already; --force (force=True) overwrites it")
+
+
+def _write_bytes(path: Path, data: bytes) -> None:
+    """Put `data` at `path` as a whole: a new file beside it is moved over it."""
+    handle, name = tempfile.mkstemp(prefix=f".{path.name}.", dir=path.parent)
+    try:
+        with os.fdopen(handle, "wb") as stream:
+            stream.write(data)
+            stream.flush()
+            os.fsync(stream.fileno())
+        umask = os.umask(0)
+        os.umask(umask)
+        Path(name).chmod(0o666 & ~umask)  # mkstemp makes files private; figures are for sharing
+        Path(name).replace(path)
+    except BaseException:
+        Path(name).unlink(missing_ok=True)
+        raise

@@ -1,0 +1,102 @@
+"""How figures look: sizes, colours that colour-blind readers tell apart, fonts, fixed bytes.
+
+Colours are those of Okabe & Ito 2008 (Color Universal Design, "How to make figures and
+presentations that are friendly to colorblind people"; values from memory), maps are cividis (Nunez,
+Anderton & Renslow 2018, PLoS ONE 13, e0199239) and the brown-to-teal diverging map of matplotlib.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+from contextlib import contextmanager
+from io import BytesIO
+from typing import TYPE_CHECKING, Any
+
+if TYPE_CHECKING:
+    from matplotlib.axes import Axes
+    from matplotlib.figure import Figure
+
+BLUE, ORANGE, GREEN, PURPLE = "#0072B2", "#D55E00", "#009E73", "#CC79A7"
+SKY, AMBER, BLACK, GREY = "#56B4E9", "#E69F00", "#000000", "#6E6E6E"
+SERIES = (BLUE, ORANGE, GREEN, PURPLE, SKY, AMBER, BLACK)
+DASHES = ("-", "--", "-.", ":", (0, (5, 1)), (0, (3, 1, 1, 1, 1, 1)), (0, (1, 1)))
+
+# Widths of one and two columns of a journal page, in inches (common practice).
+ONE_COLUMN_IN, TWO_COLUMNS_IN = 3.5, 7.1
+
+FORMATS = ("svg", "pdf")
+
+_SETTINGS: dict[str, Any] = {
+    "font.family": "DejaVu Sans",
+    "font.size": 8.0,
+    "mathtext.fontset": "dejavusans",
+    "axes.labelsize": 8.5,
+    "axes.titlesize": 8.5,
+    "axes.linewidth": 0.7,
+    "axes.formatter.use_mathtext": True,
+    "axes.unicode_minus": True,
+    "lines.linewidth": 1.4,
+    "legend.fontsize": 7.5,
+    "legend.frameon": False,
+    "legend.handlelength": 2.6,
+    "xtick.direction": "in",
+    "ytick.direction": "in",
+    "xtick.top": True,
+    "ytick.right": True,
+    "xtick.labelsize": 7.5,
+    "ytick.labelsize": 7.5,
+    "figure.dpi": 150.0,
+    "savefig.dpi": 600.0,
+    "figure.constrained_layout.use": True,
+    # Outlines in SVG look the same on every machine; TrueType in PDF is what journals take.
+    "svg.fonttype": "path",
+    "pdf.fonttype": 42,
+    # Without a fixed salt the identifiers inside an SVG are random.
+    "svg.hashsalt": "levelnet",
+}
+
+
+@contextmanager
+def house_style() -> Iterator[None]:
+    """Apply the settings above while a figure is made or saved; the user's own come back after.
+
+    matplotlib's defaults come first, so that a user's settings file cannot change the figures.
+    """
+    import matplotlib
+
+    with matplotlib.rc_context():
+        # The backend is the user's (a notebook keeps its own).
+        keep = {"backend", "backend_fallback", "interactive"}
+        parameters: Any = matplotlib.rcParams
+        parameters.update({k: v for k, v in matplotlib.rcParamsDefault.items() if k not in keep})
+        parameters.update(_SETTINGS)
+        yield
+
+
+def new_figure(width_in: float, height_in: float) -> Figure:
+    """Return an empty figure of the given size in inches, free of any global state."""
+    from matplotlib.figure import Figure
+
+    return Figure(figsize=(width_in, height_in))
+
+
+def panel_letter(axes: Axes, letter: str) -> None:
+    """Name a panel "(a)" above its upper left corner, where no curve runs."""
+    axes.set_title(f"({letter})", loc="left", fontweight="bold", fontsize=8.5, pad=4.0)
+
+
+def render(figure: Figure, file_format: str) -> bytes:
+    """Bytes of `figure` as "svg", "pdf" or "png"; equal figures give equal bytes.
+
+    Parameters
+    ----------
+    figure : matplotlib Figure
+        Any figure made here.
+    file_format : str
+        "svg", "pdf" or "png".
+    """
+    undated = {"svg": {"Date": None}, "pdf": {"CreationDate": None}, "png": {}}[file_format]
+    target = BytesIO()
+    with house_style():
+        figure.savefig(target, format=file_format, metadata=undated)
+    return target.getvalue()

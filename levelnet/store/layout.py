@@ -1,0 +1,287 @@
+"""The one list of everything in a levelnet file: names, types, dimensions, units, descriptions.
+
+Writer, reader, text tables and documentation are driven by it; :func:`describe_layout` prints it.
+
+Each variable names the field of the record it holds ("channels.share" of a History; "species."
+stands for one :class:`SpeciesPopulations`). The coordinates are repeated in every group, because
+xarray opens one group and does not look into the others. Units are in the notation of UDUNITS-2;
+that library knows "megaparsec" and not "Mpc". No ``Conventions`` attribute is written, since no
+checker has confirmed one.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+from typing import Any, Literal
+
+import numpy as np
+from numpy.typing import NDArray
+
+LAYOUT_NAME = "levelnet history"
+LAYOUT_VERSION = 1
+
+# Group of each species, in the order of writing.
+SPECIES_GROUPS = {"H I": "hydrogen", "He I": "helium", "He II": "helium_ion"}
+
+Kind = Literal["float64", "int64", "text"]
+
+
+@dataclass(frozen=True, slots=True)
+class Variable:
+    """One dataset: what it is called, what it holds, and which field of the record it is."""
+
+    name: str
+    dimensions: tuple[str, ...]
+    units: str
+    long_name: str
+    field: str
+    kind: Kind = "float64"
+    coordinates: str = ""
+
+    @property
+    def is_coordinate(self) -> bool:
+        """True for the variable that gives a dimension its name and values."""
+        return self.dimensions == (self.name,)
+
+    @property
+    def attributes(self) -> dict[str, str]:
+        """The attributes on disk. `units` is left out for text, which has none."""
+        given = {"long_name": self.long_name}
+        if self.kind != "text":
+            given["units"] = self.units
+        if self.coordinates:
+            # Tells xarray that the quantum numbers are coordinates of the levels (CF, section 5).
+            given["coordinates"] = self.coordinates
+        return given
+
+
+@dataclass(frozen=True, slots=True)
+class Group:
+    """One group of datasets that opens alone in xarray."""
+
+    name: str
+    description: str
+    variables: tuple[Variable, ...]
+    species: str = ""
+
+    @property
+    def attributes(self) -> dict[str, str]:
+        """The attributes on disk."""
+        given = {"description": self.description}
+        return given | {"species": self.species} if self.species else given
+
+
+def _z(name: str, units: str, long_name: str) -> Variable:
+    return Variable(name, ("redshift",), units, long_name, name)
+
+
+def _by_line(name: str, long_name: str) -> Variable:
+    return Variable(name, ("redshift", "line"), "1", long_name, f"lines.{name}")
+
+
+def _by_channel(name: str, units: str, long_name: str) -> Variable:
+    return Variable(name, ("redshift", "channel"), units, long_name, f"channels.{name}")
+
+
+def _milestone(name: str, units: str, long_name: str) -> Variable:
+    return Variable(name, (), units, long_name, f"milestones.{name}")
+
+
+def _diagnostic(name: str, long_name: str, kind: Kind = "float64") -> Variable:
+    return Variable(name, (), "1", long_name, f"diagnostics.{name}", kind)
+
+
+def _level(name: str, units: str, long_name: str, kind: Kind = "float64") -> Variable:
+    coordinates = "" if name in {"n", "l"} else "n l"
+    record_field = f"species.levels.{name}" + ("_ev" if units == "eV" else "")
+    return Variable(name, ("level",), units, long_name, record_field, kind, coordinates)
+
+
+def _population(name: str, long_name: str) -> Variable:
+    dimensions = ("redshift", "level")
+    return Variable(name, dimensions, "1", long_name, f"species.{name}", coordinates="n l")
+
+
+REDSHIFT = _z("redshift", "1", "redshift, descending")
+
+HISTORY = Group(
+    "history",
+    "ionization and thermal history; no reionization",
+    (
+        REDSHIFT,
+        _z("free_electron_fraction", "1", "free electrons per hydrogen nucleus"),
+        _z("ionized_hydrogen_fraction", "1", "ionized part of the hydrogen nuclei"),
+        _z("neutral_hydrogen_fraction", "1", "neutral part of the hydrogen nuclei"),
+        _z("neutral_helium_fraction", "1", "neutral part of the helium nuclei"),
+        _z("singly_ionized_helium_fraction", "1", "singly ionized part of the helium nuclei"),
+        _z("doubly_ionized_helium_fraction", "1", "doubly ionized part of the helium nuclei"),
+        _z("matter_temperature_k", "K", "matter temperature"),
+        _z("radiation_temperature_k", "K", "radiation temperature"),
+        _z("hydrogen_density_cm3", "cm-3", "number density of all hydrogen nuclei"),
+        _z("hubble_rate_per_s", "s-1", "expansion rate"),
+        _z("cosmic_time_s", "s", "time since the Big Bang"),
+        _z("optical_depth", "1", "Thomson optical depth from the lowest output redshift up"),
+        _z(
+            "visibility",
+            "megaparsec-1",
+            "visibility function (d tau / d eta) exp(-tau) per comoving length",
+        ),
+    ),
+)
+
+LINES = Group(
+    "lines",
+    "validity figures of the line-escape treatment, per line and redshift",
+    (
+        REDSHIFT,
+        Variable("line", ("line",), "", "upper and lower level of the line", "lines.names", "text"),
+        _by_line("optical_depth", "Sobolev optical depth"),
+        _by_line("escape_probability", "chance that a photon of the line escapes"),
+        _by_line("damping_parameter", "Voigt parameter, decay rate over 4 pi Doppler widths"),
+        _by_line("crossing_time_hubble", "time to cross the optically thick width, Hubble times"),
+    ),
+)
+
+CHANNELS = Group(
+    "channels",
+    "how recombined atoms reached the ground state",
+    (
+        REDSHIFT,
+        Variable(
+            "channel",
+            ("channel",),
+            "",
+            "transition to the ground state; 2s-1s: two photons",
+            "channels.names",
+            "text",
+        ),
+        _by_channel("net_rate_per_s", "s-1", "net transitions per hydrogen nucleus"),
+        _by_channel("share", "1", "part of the net rate at this redshift"),
+        _by_channel("cumulative_share", "1", "part of all net recombinations so far"),
+    ),
+)
+
+MILESTONES = Group(
+    "milestones",
+    "numbers that sum up the history; NaN where the grid does not reach the event",
+    (
+        _milestone("last_scattering_redshift", "1", "redshift of unit optical depth"),
+        _milestone("visibility_peak_redshift", "1", "redshift where the visibility peaks"),
+        _milestone("visibility_width", "1", "full width at half maximum of the visibility"),
+        _milestone("half_ionized_redshift", "1", "redshift where half the hydrogen is ionized"),
+        _milestone("last_scattering_time_s", "s", "cosmic time at unit optical depth"),
+    ),
+)
+
+DIAGNOSTICS = Group(
+    "diagnostics",
+    "how the run went",
+    (
+        _diagnostic("handover_redshift", "redshift where Saha equilibrium is left"),
+        _diagnostic(
+            "handover_departure", "relative difference of the neutral fraction at the hand-over"
+        ),
+        _diagnostic("steps", "steps of the integration", "int64"),
+        _diagnostic("rejected_steps", "rejected steps of the integration", "int64"),
+        _diagnostic("evaluations", "evaluations of the equations", "int64"),
+        _diagnostic("nodes", "nodes in ln T_r where the network was reduced", "int64"),
+        _diagnostic("interpolation_error", "largest error off the nodes of ln of any reduced rate"),
+        _diagnostic("conservation_error", "largest relative imbalance of the populations"),
+        _diagnostic(
+            "slowest_relaxation_hubble", "slowest relaxation rate over the Hubble rate, smallest"
+        ),
+    ),
+)
+
+NOTES = Group(
+    "notes",
+    "what a user must know before relying on the result",
+    (Variable("note", ("note",), "", "statements, in order", "notes", "text"),),
+)
+
+SPECIES_VARIABLES = (
+    REDSHIFT,
+    Variable("level", ("level",), "1", "position of the level, from 0", "", "int64", "n l"),
+    _level("n", "1", "principal quantum number", "int64"),
+    _level("l", "1", "orbital quantum number", "int64"),
+    _level("statistical_weight", "1", "statistical weight 2 (2 l + 1), nuclear spin not counted"),
+    _level("energy", "eV", "energy above the ground state"),
+    _level("ionization_energy", "eV", "energy that ionizes the level"),
+    _population("population", "atoms in the level per hydrogen nucleus"),
+    _population(
+        "log_departure",
+        "natural logarithm of population over Saha-Boltzmann population at matter temperature",
+    ),
+)
+
+FIXED_GROUPS = (HISTORY, LINES, CHANNELS, MILESTONES, DIAGNOSTICS, NOTES)
+
+# Attributes of the file as a whole; all are text but the layout version.
+ROOT_ATTRIBUTES = {
+    "layout": "name of this layout",
+    "layout_version": "integer; a reader refuses a newer one",
+    "setup": "the whole setup as TOML text",
+    "setup_digest": "sixteen hexadecimal digits that name the setup",
+    "outcome": "how the run ended: name of an Outcome",
+    "outcome_text": "the same as one sentence",
+    "levelnet_version": "version that wrote the file",
+    "numpy_version": "version at writing",
+    "scipy_version": "version at writing",
+    "numba_version": "version at writing",
+    "h5py_version": "version at writing",
+    "codata_edition": "edition of the physical constants",
+    "table_checksums": "one line per atomic table: name and sha256",
+    "digest": "sha256 over names, shapes, units, attributes and data of everything else",
+}
+
+
+def species_group(species: str) -> Group:
+    """Return the group that holds the populations of `species` ("H I")."""
+    description = f"levels of {species}: quantum numbers, energies, populations"
+    return Group(SPECIES_GROUPS[species], description, SPECIES_VARIABLES, species)
+
+
+def groups_of(species: tuple[str, ...]) -> tuple[Group, ...]:
+    """All groups of a file with these species, in the order of writing."""
+    return (HISTORY, *(species_group(name) for name in species), *FIXED_GROUPS[1:])
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Stored:
+    """One variable as it stands in a file: text as a tuple, numbers as an array."""
+
+    dimensions: tuple[str, ...]
+    attributes: dict[str, str]
+    values: tuple[str, ...] | NDArray[Any]
+
+    @property
+    def shape(self) -> tuple[int, ...]:
+        """Lengths of the dimensions."""
+        return (len(self.values),) if isinstance(self.values, tuple) else self.values.shape
+
+
+@dataclass(slots=True, eq=False)
+class Content:
+    """All that a file says, whatever its encoding; variables and groups by their path."""
+
+    attributes: dict[str, str | int] = field(default_factory=dict)
+    groups: dict[str, dict[str, str]] = field(default_factory=dict)
+    variables: dict[str, Stored] = field(default_factory=dict)
+
+
+def number_type(kind: Kind) -> np.dtype[Any]:
+    """Return the type on disk of numbers of `kind`: little-endian on every machine."""
+    return np.dtype("<i8") if kind == "int64" else np.dtype("<f8")
+
+
+def describe_layout() -> str:
+    """Return the layout as text: one line for each group, dataset and attribute of the file."""
+    lines = [f"{LAYOUT_NAME}, version {LAYOUT_VERSION}", "", "attributes of the file"]
+    lines += [f"  {name}: {text}" for name, text in ROOT_ATTRIBUTES.items()]
+    for group in groups_of(("H I",)):
+        lines += ["", f"group {group.name}: {group.description}"]
+        for one in group.variables:
+            where = f"({', '.join(one.dimensions)})" if one.dimensions else ""
+            units = "" if one.kind == "text" else f" [{one.units}]"
+            lines.append(f"  {one.kind:7s} {one.name}{where}{units}: {one.long_name}")
+    return "\n".join(lines) + "\n"

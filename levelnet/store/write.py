@@ -1,0 +1,213 @@
+"""Write a result as HDF5: whole or not at all, the same bytes for the same result."""
+
+from __future__ import annotations
+
+import os
+from collections.abc import Callable
+from operator import attrgetter
+from pathlib import Path
+from typing import TYPE_CHECKING, Any, BinaryIO
+
+import numpy as np
+from numpy.typing import NDArray
+
+from ..errors import InputError
+from ..history.result import History, SpeciesPopulations
+from . import layout
+from .digest import content_digest, seal
+from .layout import Content, Stored, Variable
+from .provenance import provenance
+from .whole_file import whole_file
+
+if TYPE_CHECKING:
+    import h5py
+
+# Chunks of at most 64 redshifts x 2048 levels (1 MiB), the size of HDF5's chunk cache.
+_CHUNK = (64, 2048)
+_CHUNK_ONE_DIMENSION = 16384
+
+
+def write(result: History, path: str | Path, force: bool = False) -> None:
+    """Write a history to an HDF5 file in the layout of :mod:`levelnet.store.layout`.
+
+    Parameters
+    ----------
+    result : History
+        What to store.
+    path : str or Path
+        The file; it appears whole or not at all.
+    force : bool
+        True allows an existing file to be replaced.
+
+    Raises
+    ------
+    InputError
+        If the file exists and `force` is False, or cannot be written.
+
+    Notes
+    -----
+    No time is stored: the same result gives the same bytes with the same versions of the libraries.
+    The file opens with ``xarray.open_dataset(path, engine="h5netcdf", group="history")``.
+    """
+    content = content_of(result)
+    with whole_file(path, force) as raw:
+        save(content, raw)
+        seal(raw)
+
+
+def content_of(history: History) -> Content:
+    """Everything a file says about `history`, with the digest over all of it."""
+    content = Content(attributes=_root_attributes(history))
+    species = {one.name: one for one in history.species}
+    unknown = sorted(set(species) - set(layout.SPECIES_GROUPS))
+    if unknown or len(species) < len(history.species):
+        allowed = ", ".join(layout.SPECIES_GROUPS)
+        raise InputError(f"species {unknown or 'given twice'}: allowed, each once: {allowed}")
+    for group in layout.groups_of(tuple(species)):
+        content.groups[group.name] = group.attributes
+        for variable in group.variables:
+            values = _values(variable, history, species.get(group.species))
+            stored = Stored(variable.dimensions, variable.attributes, values)
+            content.variables[f"{group.name}/{variable.name}"] = stored
+    content.attributes["digest"] = content_digest(content)
+    return content
+
+
+def _root_attributes(history: History) -> dict[str, str | int]:
+    return {
+        "layout": layout.LAYOUT_NAME,
+        "layout_version": layout.LAYOUT_VERSION,
+        "setup": history.setup.to_toml(),
+        "setup_digest": history.setup.digest,
+        "outcome": history.outcome.name,
+        "outcome_text": history.outcome.value,
+        **provenance(),
+    }
+
+
+def _values(
+    variable: Variable, history: History, species: SpeciesPopulations | None
+) -> tuple[str, ...] | NDArray[Any]:
+    """Take one variable out of the record."""
+    start, _, rest = variable.field.partition(".")
+    if start == "species":
+        values = attrgetter(rest)(species)
+    elif start:
+        values = attrgetter(variable.field)(history)
+    else:
+        values = np.arange(len(species.levels) if species else 0)
+    if variable.kind == "text":
+        return tuple(values)
+    return np.asarray(values, dtype=layout.number_type(variable.kind))
+
+
+class _Sink:
+    """The file as HDF5 sees it: after a failure it takes everything and keeps nothing.
+
+    HDF5 that cannot write cannot close its file either; it tries again when Python ends, and then
+    crashes. So it is never told: the first error (an interrupt included) is kept for :func:`save`
+    to raise. The position is kept here, since seeking in a buffered file writes.
+    """
+
+    def __init__(self, raw: BinaryIO) -> None:
+        self._raw = raw
+        self._position = 0
+        self._length = 0
+        self.error: BaseException | None = None
+
+    def _attempt(self, action: Callable[..., object], *arguments: object) -> object:
+        if self.error is None:
+            try:
+                self._raw.seek(self._position)
+                return action(*arguments)
+            except BaseException as error:
+                self.error = error
+        return None
+
+    def write(self, data: Any) -> int:
+        self._attempt(self._raw.write, data)
+        self._position += len(data)
+        self._length = max(self._length, self._position)
+        return len(data)
+
+    def read(self, size: int) -> object:
+        data = self._attempt(self._raw.read, size)
+        self._position += size
+        return data if isinstance(data, bytes) and len(data) == size else bytes(size)
+
+    def truncate(self, size: int) -> int:
+        self._attempt(self._raw.truncate, size)
+        self._length = size
+        return size
+
+    def flush(self) -> None:
+        self._attempt(self._raw.flush)
+
+    def seek(self, offset: int, whence: int = os.SEEK_SET) -> int:
+        start = {os.SEEK_SET: 0, os.SEEK_CUR: self._position, os.SEEK_END: self._length}[whence]
+        self._position = start + offset
+        return self._position
+
+    def tell(self) -> int:
+        return self._position
+
+    def check(self) -> None:
+        """Raise what went wrong, if anything."""
+        if self.error is not None:
+            raise self.error
+
+
+def save(content: Content, raw: BinaryIO) -> None:
+    """Encode `content` as HDF5 into an empty binary file, open for reading and writing."""
+    import h5py
+
+    sink = _Sink(raw)
+    # The oldest structures that hold the data, so that older readers can open the file.
+    with h5py.File(sink, "w", libver=("earliest", "v110")) as file:
+        for name, value in content.attributes.items():
+            file.attrs[name] = np.int64(value) if isinstance(value, int) else value
+        for name, attributes in content.groups.items():
+            group = file.create_group(name)
+            group.attrs.update(attributes)
+        for path, stored in content.variables.items():
+            _save_variable(file, path, stored)
+            sink.check()
+        for path, stored in content.variables.items():
+            _attach_dimensions(file, path, stored)
+    sink.check()
+
+
+def _save_variable(file: h5py.File, path: str, stored: Stored) -> None:
+    import h5py
+
+    if isinstance(stored.values, tuple):
+        kind = h5py.string_dtype()
+        data = np.array(stored.values, dtype=object)
+        dataset = file.create_dataset(path, data=data, dtype=kind, track_times=False)
+    else:
+        options = _storage(stored.shape)
+        dataset = file.create_dataset(path, data=stored.values, track_times=False, **options)
+    dataset.attrs.update(stored.attributes)
+
+
+def _storage(shape: tuple[int, ...]) -> dict[str, Any]:
+    # A single number, or no number at all, cannot be cut into chunks.
+    if not shape or 0 in shape:
+        return {}
+    limits = (_CHUNK_ONE_DIMENSION,) if len(shape) == 1 else _CHUNK
+    chunks = tuple(min(length, limit) for length, limit in zip(shape, limits, strict=True))
+    # The filters that every netCDF and HDF5 reader has.
+    return {"chunks": chunks, "compression": "gzip", "shuffle": True, "fletcher32": True}
+
+
+def _attach_dimensions(file: h5py.File, path: str, stored: Stored) -> None:
+    group, _, name = path.rpartition("/")
+    if stored.dimensions == (name,):
+        if not file[path].is_scale:
+            file[path].make_scale(name)
+        return
+    for axis, dimension in enumerate(stored.dimensions):
+        scale = file[f"{group}/{dimension}"]
+        if not scale.is_scale:
+            scale.make_scale(dimension)
+        file[path].dims[axis].attach_scale(scale)

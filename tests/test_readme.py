@@ -1,0 +1,89 @@
+"""The README says what is there: its two commands, every key of the setup, nothing left open."""
+
+from __future__ import annotations
+
+import dataclasses
+import re
+import tomllib
+from pathlib import Path
+
+import pytest
+
+import levelnet
+from levelnet.history.setup import Setup, parse_setup
+
+ROOT = Path(__file__).resolve().parents[1]
+README = (ROOT / "README.md").read_text(encoding="utf-8")
+PARTS = {field.name: field for field in dataclasses.fields(Setup) if field.name != "title"}
+KEYS = [
+    (part, field)
+    for part in PARTS
+    for field in dataclasses.fields(
+        type(getattr(parse_setup(re.findall(r"```toml\n(.*?)```", README, re.S)[0]), part))
+    )
+]
+
+
+def section(heading: str) -> str:
+    """Give the text under a heading of level two."""
+    return README.split(f"\n## {heading}\n")[1].split("\n## ")[0]
+
+
+def test_start_has_two_commands_of_one_line() -> None:
+    blocks = re.findall(r"^```sh\n(.*?)^```$", section("Start"), re.S | re.M)
+    assert len(blocks) == 2
+    for block in blocks:
+        assert len(block.splitlines()) == 1
+    assert "levelnet demo" in blocks[0]
+    assert "pytest" in blocks[1]
+    assert len(re.findall("^```sh", README, re.M)) == 2
+
+
+def rows_of(part: str) -> dict[str, list[str]]:
+    """Read the table of a part: key -> cells of its row."""
+    text = section("Setup file").split(f"`[{part}]`")[1].split("\n\n`[")[0]
+    found: dict[str, list[str]] = {}
+    for line in text.splitlines():
+        if line.startswith("| `"):
+            cells = [cell.strip() for cell in line.strip("|").split("|")]
+            found.update(dict.fromkeys(re.findall(r"`(\w+)`", cells[0]), cells))
+    return found
+
+
+@pytest.mark.parametrize(("part", "field"), KEYS, ids=[f"{p}.{f.name}" for p, f in KEYS])
+def test_every_key_of_the_setup_is_explained(part: str, field: dataclasses.Field) -> None:
+    cells = rows_of(part)[field.name]
+    if field.default is dataclasses.MISSING:
+        assert cells[1] == "needed"
+    elif field.name == "helium_mass_fraction":
+        # None stands for a value that depends on another key.
+        assert cells[1] == "`0.245`"
+    elif field.default is None:
+        assert cells[1] == "not set"
+    else:
+        value = tomllib.loads(f"x = {cells[1].strip('`')}")["x"]
+        assert (tuple(value) if isinstance(value, list) else value) == field.default
+
+
+@pytest.mark.parametrize("part", PARTS)
+def test_no_key_is_explained_that_is_not_there(part: str) -> None:
+    assert set(rows_of(part)) == {field.name for one, field in KEYS if one == part}
+
+
+def test_version_is_the_same_everywhere() -> None:
+    citation = (ROOT / "CITATION.cff").read_text(encoding="utf-8")
+    assert f"\nversion: {levelnet.__version__}\n" in citation
+    assert f"### {levelnet.__version__}" in section("Changes")
+
+
+def test_nothing_is_left_to_fill() -> None:
+    assert "TO FILL" not in README
+
+
+def test_python_example_runs(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.chdir(tmp_path)
+    example = re.findall(r"```python\n(.*?)```", README, re.S)[0]
+    names: dict[str, object] = {}
+    exec(compile(example, "README.md", "exec"), names)
+    assert (tmp_path / "result.h5").exists()
+    assert repr(names["again"]) == repr(names["history"])

@@ -1,0 +1,461 @@
+"""The command line from outside: exit codes, one-line complaints, whole files, JSON.
+
+Most checks run :func:`levelnet.cli.main.main` in this process, which is what the console script
+runs; what only a process has (imports, signals, a closed pipe) is run as one. What is expected here
+is the project's own contract: exit codes 0, 1, 2 and 130, one line on stderr.
+"""
+
+from __future__ import annotations
+
+import errno
+import json
+import os
+import re
+import signal
+import subprocess
+import sys
+from importlib.resources import files
+from pathlib import Path
+
+import h5py
+import numpy as np
+import pytest
+
+import levelnet
+from levelnet.cli.main import main
+from levelnet.errors import AccuracyWarning, SolveError
+
+ROOT = Path(__file__).resolve().parents[2]
+GOOD = """\
+title = "small"
+[cosmology]
+hubble_km_s_mpc = 68.0
+baryon_density_h2 = 0.0224
+matter_density_h2 = 0.142
+helium_mass_fraction = 0.245
+[hydrogen]
+n_max = 4
+[grid]
+redshift_start = 1700.0
+redshift_end = 200.0
+n_redshifts = 30
+"""
+
+
+def environment() -> dict[str, str]:
+    return {**os.environ, "PYTHONPATH": str(ROOT), "PYTHONUNBUFFERED": "1"}
+
+
+def process(*words: str, folder: Path) -> subprocess.CompletedProcess[str]:
+    return subprocess.run(
+        [sys.executable, "-m", "levelnet", *words],
+        cwd=folder,
+        env=environment(),
+        capture_output=True,
+        text=True,
+        timeout=120,
+        check=False,
+    )
+
+
+def changed(old: str, new: str) -> str:
+    assert old in GOOD
+    return GOOD.replace(old, new)
+
+
+@pytest.fixture
+def folder(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Path:
+    """Work in an empty folder that holds one good setup."""
+    monkeypatch.chdir(tmp_path)
+    (tmp_path / "good.toml").write_text(GOOD)
+    return tmp_path
+
+
+@pytest.fixture(scope="module")
+def solved(tmp_path_factory: pytest.TempPathFactory) -> Path:
+    """Solve the small setup once, as a process, and return its file."""
+    place = tmp_path_factory.mktemp("solved")
+    (place / "good.toml").write_text(GOOD)
+    done = process("solve", "good.toml", folder=place)
+    assert done.returncode == 0, done.stderr
+    assert "z_* (tau = 1)" in done.stdout
+    assert sorted(p.name for p in place.iterdir()) == ["good.h5", "good.toml"]
+    return place / "good.h5"
+
+
+def complaint(capsys: pytest.CaptureFixture[str]) -> str:
+    """Return the only line of stderr; stdout must be empty."""
+    said = capsys.readouterr()
+    assert said.out == ""
+    lines = said.err.splitlines()
+    assert len(lines) == 1, said.err
+    assert lines[0].startswith("levelnet: error: ")
+    assert "Traceback" not in lines[0]
+    return lines[0]
+
+
+BAD_SETUPS = {
+    "unknown key": (changed("n_max = 4", "n_max = 4\nn_min = 1"), ["hydrogen.n_min", "unknown"]),
+    "wrong type": (changed("n_max = 4", 'n_max = "4"'), ["hydrogen.n_max = '4'", "integer"]),
+    "n_max 1": (changed("n_max = 4", "n_max = 1"), ["hydrogen.n_max = 1", "2"]),
+    "n_max 10000": (changed("n_max = 4", "n_max = 10000"), ["n_max", "10000", "GiB", "memory"]),
+    "negative density": (
+        changed("baryon_density_h2 = 0.0224", "baryon_density_h2 = -0.0224"),
+        ["cosmology.baryon_density_h2 = -0.0224"],
+    ),
+    "grid upside down": (
+        changed("redshift_end = 200.0", "redshift_end = 1800.0"),
+        ["redshift_end = 1800", "below", "1700"],
+    ),
+    "cold": (
+        changed("[hydrogen]", "cmb_temperature_k = 0.0\n[hydrogen]"),
+        ["cosmology.cmb_temperature_k = 0.0", "greater than"],
+    ),
+    "not TOML": ("[cosmology\n", ["not valid TOML", "line 1"]),
+    "three at once": (
+        changed("n_max = 4", "n_max = 1\nnmax = 4").replace("0.0224", '"low"'),
+        ["hydrogen.n_max", "hydrogen.nmax", "cosmology.baryon_density_h2"],
+    ),
+}
+
+
+@pytest.mark.parametrize("name", BAD_SETUPS)
+def test_bad_setup_is_one_line_and_writes_nothing(
+    name: str, folder: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    text, words = BAD_SETUPS[name]
+    (folder / "bad.toml").write_text(text)
+    before = sorted(folder.iterdir())
+    assert main(["solve", "bad.toml"]) == 2
+    line = complaint(capsys)
+    assert "bad.toml" in line or name == "n_max 10000"
+    for word in words:
+        assert word in line
+    assert sorted(folder.iterdir()) == before
+
+
+def test_bad_setup_as_a_process(folder: Path) -> None:
+    (folder / "bad.toml").write_text(BAD_SETUPS["three at once"][0])
+    done = process("solve", "bad.toml", folder=folder)
+    assert done.returncode == 2
+    assert done.stdout == ""
+    assert len(done.stderr.splitlines()) == 1
+    assert "hydrogen.nmax: unknown key" in done.stderr
+
+
+def test_dry_run_refuses_memory_too(folder: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    (folder / "big.toml").write_text(changed("n_max = 4", "n_max = 10000"))
+    assert main(["solve", "big.toml", "--dry-run"]) == 2
+    assert re.search(r"\d+(\.\d+)? (GiB|TiB)", complaint(capsys))
+
+
+@pytest.mark.parametrize(
+    ("words", "expected"),
+    [
+        (["solve"], "SETUP"),
+        (["solve", "good.toml", "--frobnicate"], "--frobnicate"),
+        (["solve", "good.toml", "--forc"], "--forc"),
+        (["guess"], "guess"),
+    ],
+)
+def test_bad_usage_is_one_line(
+    words: list[str], expected: str, folder: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    with pytest.raises(SystemExit) as ended:
+        main(words)
+    assert ended.value.code == 2
+    assert expected in complaint(capsys)
+
+
+@pytest.mark.parametrize(
+    ("words", "expected"),
+    [
+        (["solve", "none.toml"], "none.toml: cannot be read"),
+        (["solve", "good.toml", "-o", "none/a.h5"], "none"),
+        (["solve", "good.toml", "-o", "good.toml", "--force"], "the file that is read"),
+        (["solve", "good.toml", "-o", ".", "--force"], "not a plain file"),
+        (["show", "none.h5"], "none.h5"),
+        (["show", "good.toml"], "good.toml"),
+        (["show", "good.toml", "--ascending"], "--csv"),
+        (["show", "good.toml", "--redshift", "5"], "--plot"),
+        (["show", "good.toml", "--json", "--csv", "-"], "--json"),
+        (["demo", "--output", "good.toml"], "good.toml"),
+        (["demo", "--output", "good.toml/x"], "good.toml"),
+    ],
+)
+def test_bad_files_are_one_line(
+    words: list[str], expected: str, folder: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    assert main(words) == 2
+    assert expected in complaint(capsys)
+    assert [p.name for p in folder.iterdir()] == ["good.toml"]
+    assert (folder / "good.toml").read_text() == GOOD
+
+
+def test_existing_output_is_refused_before_the_work_starts(
+    folder: Path, capsys: pytest.CaptureFixture[str], monkeypatch: pytest.MonkeyPatch
+) -> None:
+    (folder / "good.h5").write_bytes(b"precious")
+    monkeypatch.setattr("levelnet.history.run.solve", None)  # calling it would fail
+    assert main(["solve", "good.toml"]) == 2
+    line = complaint(capsys)
+    assert "good.h5" in line
+    assert "--force" in line
+    assert (folder / "good.h5").read_bytes() == b"precious"
+
+
+def test_foreign_and_damaged_files(
+    solved: Path, folder: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    with h5py.File("foreign.h5", "w") as file:
+        file["x"] = np.arange(3)
+    data = solved.read_bytes()
+    Path("cut.h5").write_bytes(data[: len(data) // 2])
+    Path("empty.h5").write_bytes(b"")
+    for name in ("foreign.h5", "cut.h5", "empty.h5"):
+        for more in ([], ["--plot"], ["--csv", "t.csv"]):
+            assert main(["show", name, *more]) == 2
+            assert name in complaint(capsys)
+    assert not Path("t.csv").exists()
+    assert not list(folder.glob("*figures"))
+
+
+def test_solve_overwrites_only_with_force(folder: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    Path("out.h5").write_bytes(b"old")
+    assert main(["solve", "good.toml", "-o", "out.h5", "--force", "--json", "--no-cache"]) == 0
+    values = json.loads(capsys.readouterr().out)
+    assert values["ok"] is True
+    assert values["file"] == "out.h5"
+    assert 1000.0 < values["milestones"]["last_scattering_redshift"] < 1200.0
+    shares = values["cumulative_channel_shares"]
+    assert set(shares) == {"2s-1s", "2p-1s"}
+    assert sum(shares.values()) == pytest.approx(1.0, abs=1e-12)
+    history = levelnet.read("out.h5")
+    samples = values["samples"]
+    row = int(np.argmin(np.abs(history.redshift - samples["redshift"][0])))
+    assert samples["free_electron_fraction"][0] == history.free_electron_fraction[row]
+
+
+def test_direct_mode_is_recorded_and_agrees(
+    solved: Path, folder: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    assert main(["solve", "good.toml", "--direct"]) == 0
+    assert "direct, no interpolation" in capsys.readouterr().out
+    direct, usual = levelnet.read("good.h5"), levelnet.read(solved)
+    assert not direct.setup.accuracy.interpolate
+    # Both are held to accuracy.relative = 1e-6, so they may differ by a few of that.
+    np.testing.assert_allclose(
+        direct.free_electron_fraction, usual.free_electron_fraction, rtol=5e-6
+    )
+
+
+def test_dry_run_writes_nothing(folder: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    assert main(["solve", "good.toml", "--dry-run", "--json"]) == 0
+    values = json.loads(capsys.readouterr().out)
+    assert values["memory_bytes"] > 0
+    assert values["seconds"] > 0
+    assert [p.name for p in folder.iterdir()] == ["good.toml"]
+
+
+def test_show_prints_the_summary_of_solve(
+    solved: Path, folder: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    assert main(["show", str(solved), "--json"]) == 0
+    values = json.loads(capsys.readouterr().out)
+    assert values["title"] == "small"
+    assert values["written"] == []
+    assert main(["show", str(solved)]) == 0
+    text = capsys.readouterr().out
+    peak = values["milestones"]["visibility_peak_redshift"]
+    assert f"z = {peak:.2f}" in text
+
+
+def test_show_csv_to_stdout_and_file(
+    solved: Path, folder: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    assert main(["show", str(solved), "--csv", "-", "--ascending"]) == 0
+    printed = capsys.readouterr().out
+    assert main(["show", str(solved), "--csv", "t.csv", "--ascending"]) == 0
+    assert Path("t.csv").read_text() == printed
+    rows = np.loadtxt("t.csv", delimiter=",")
+    assert np.all(np.diff(rows[:, 0]) > 0.0)
+    capsys.readouterr()
+    assert main(["show", str(solved), "--csv", "t.csv"]) == 2
+    assert "t.csv" in complaint(capsys)
+    assert main(["show", str(solved), "--csv", str(solved), "--force"]) == 2
+    assert "the file that is read" in complaint(capsys)
+
+
+def test_show_plot_writes_figures_once(
+    solved: Path, folder: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    assert main(["show", str(solved), "--plot"]) == 0
+    assert "good-figures" in capsys.readouterr().out
+    names = sorted(p.name for p in Path("good-figures").iterdir())
+    assert len(names) == 10
+    assert {Path(name).suffix for name in names} == {".svg", ".pdf"}
+    assert main(["show", str(solved), "--plot"]) == 2
+    assert "--force" in complaint(capsys)
+    assert main(["show", str(solved), "--plot", "f", "--redshift", "5000"]) == 2
+    assert "redshift = 5000" in complaint(capsys)
+    assert not Path("f").exists()
+
+
+def test_tables_lists_sources(capsys: pytest.CaptureFixture[str]) -> None:
+    assert main(["tables", "--json"]) == 0
+    tables = json.loads(capsys.readouterr().out)
+    assert tables
+    for table in tables:
+        assert table["authors"]
+        assert re.fullmatch("[0-9a-f]{64}", table["sha256"])
+    assert main(["tables"]) == 0
+    text = capsys.readouterr().out
+    assert all(table["name"] in text for table in tables)
+
+
+def test_demo_says_that_it_is_invented(
+    folder: Path, capsys: pytest.CaptureFixture[str], monkeypatch: pytest.MonkeyPatch
+) -> None:
+    # A smaller atom, so that the test is short; the demo as it is runs under the benchmarks.
+    small = files("levelnet.cli").joinpath("demo.toml").read_text().replace("= 30", "= 4")
+    monkeypatch.setattr("levelnet.cli.demo.demo_text", lambda: small)
+    assert main(["demo"]) == 0
+    assert "invented" in capsys.readouterr().out
+    made = Path("levelnet-demo")
+    assert (made / "demo.toml").read_text() == small
+    assert levelnet.read(made / "demo.h5").setup == levelnet.load_setup(made / "demo.toml")
+    assert len(list(made.glob("*.svg"))) == 5
+    assert "INVENTED" in (made / "demo.toml").read_text()
+    assert main(["demo"]) == 2
+    assert "--force" in complaint(capsys)
+
+
+def test_failed_computation_is_exit_code_1(
+    folder: Path, capsys: pytest.CaptureFixture[str], monkeypatch: pytest.MonkeyPatch
+) -> None:
+    def fail(*arguments: object, **options: object) -> None:
+        raise SolveError("the step size shrank\nto nothing at z = 900")
+
+    monkeypatch.setattr("levelnet.history.run.solve", fail)
+    assert main(["solve", "good.toml"]) == 1
+    assert "shrank to nothing at z = 900" in complaint(capsys)
+    assert [p.name for p in folder.iterdir()] == ["good.toml"]
+
+
+def test_unexpected_error_has_no_traceback_unless_asked(
+    folder: Path, capsys: pytest.CaptureFixture[str], monkeypatch: pytest.MonkeyPatch
+) -> None:
+    monkeypatch.setattr("levelnet.history.run.solve", lambda *a, **k: 1 / 0)
+    assert main(["solve", "good.toml"]) == 1
+    assert "internal: ZeroDivisionError" in complaint(capsys)
+    with pytest.raises(ZeroDivisionError):
+        main(["solve", "good.toml", "--debug"])
+
+
+def test_disk_full_is_exit_code_1_and_leaves_nothing(
+    solved: Path, folder: Path, capsys: pytest.CaptureFixture[str], monkeypatch: pytest.MonkeyPatch
+) -> None:
+    def full(descriptor: int) -> None:
+        raise OSError(errno.ENOSPC, os.strerror(errno.ENOSPC))
+
+    monkeypatch.setattr(os, "fsync", full)
+    for words in (["solve", "good.toml"], ["show", str(solved), "--csv", "t.csv"]):
+        assert main(words) == 1
+        assert "No space left" in complaint(capsys)
+    assert main(["show", str(solved), "--plot", "f"]) == 1
+    assert "No space left" in complaint(capsys)
+    assert [p.name for p in folder.rglob("*") if p.is_file()] == ["good.toml"]
+
+
+def test_warnings_are_one_line_each(
+    folder: Path, capsys: pytest.CaptureFixture[str], monkeypatch: pytest.MonkeyPatch, solved: Path
+) -> None:
+    import warnings
+
+    def warn(*arguments: object, **options: object) -> object:
+        for _ in range(3):
+            warnings.warn("depth 0.5\nbelow 1", AccuracyWarning, stacklevel=1)
+        return levelnet.read(solved)
+
+    monkeypatch.setattr("levelnet.history.run.solve", warn)
+    assert main(["solve", "good.toml"]) == 0
+    assert capsys.readouterr().err == "levelnet: warning: depth 0.5 below 1\n"
+
+
+def test_result_that_is_not_ok_is_written_and_said(
+    folder: Path, capsys: pytest.CaptureFixture[str], monkeypatch: pytest.MonkeyPatch, solved: Path
+) -> None:
+    import dataclasses
+
+    from levelnet.errors import Outcome
+
+    lost = dataclasses.replace(levelnet.read(solved), outcome=Outcome.QUASI_STEADY_LOST)
+    monkeypatch.setattr("levelnet.history.run.solve", lambda *a, **k: lost)
+    assert main(["solve", "good.toml", "--json"]) == 1
+    said = capsys.readouterr()
+    assert json.loads(said.out)["ok"] is False
+    assert said.err.startswith("levelnet: QUASI_STEADY_LOST: ")
+    assert len(said.err.splitlines()) == 1
+    assert levelnet.read("good.h5").outcome is Outcome.QUASI_STEADY_LOST
+
+
+def test_closed_pipe_is_silent(solved: Path, folder: Path) -> None:
+    command = [sys.executable, "-m", "levelnet", "show", str(solved), "--csv", "-"]
+    with subprocess.Popen(
+        command, cwd=folder, env=environment(), stdout=subprocess.PIPE, stderr=subprocess.PIPE
+    ) as running:
+        assert running.stdout is not None
+        assert running.stderr is not None
+        running.stdout.close()  # as head does
+        assert running.stderr.read() == b""
+    assert running.returncode == 0
+
+
+def test_interrupt_ends_with_130_and_leaves_nothing(folder: Path) -> None:
+    # Large enough to be announced, and to last until the signal comes.
+    (folder / "large.toml").write_text(changed("n_max = 4", "n_max = 220"))
+    with subprocess.Popen(
+        [sys.executable, "-m", "levelnet", "solve", "large.toml", "--no-cache"],
+        cwd=folder,
+        env=environment(),
+        stdout=subprocess.PIPE,
+        stderr=subprocess.PIPE,
+        text=True,
+        # A runner in the background may ignore the signal, and children inherit that.
+        preexec_fn=lambda: signal.signal(signal.SIGINT, signal.SIG_DFL),  # noqa: PLW1509
+    ) as running:
+        assert running.stderr is not None
+        first = running.stderr.readline()
+        assert first.startswith("levelnet: estimated: "), first
+        running.send_signal(signal.SIGINT)
+        out, rest = running.communicate(timeout=60)
+    assert running.returncode == 130
+    assert out == ""
+    assert rest == "levelnet: interrupted; no file was left half-written\n"
+    assert sorted(p.name for p in folder.iterdir()) == ["good.toml", "large.toml"]
+
+
+def test_import_and_help_load_nothing_slow(folder: Path) -> None:
+    slow = "numba h5py matplotlib sympy pydantic scipy numpy rich"
+    check = (
+        "import sys, levelnet; from levelnet.cli.main import build_parser; "
+        "build_parser().format_help(); dir(levelnet); "
+        f"print([m for m in {slow.split()} if m in sys.modules])"
+    )
+    done = subprocess.run(
+        [sys.executable, "-c", check],
+        env=environment(),
+        cwd=folder,
+        capture_output=True,
+        text=True,
+        check=True,
+    )
+    assert done.stdout == "[]\n"
+    assert process("--version", folder=folder).stdout == f"levelnet {levelnet.__version__}\n"
+
+
+def test_every_public_name_can_be_imported() -> None:
+    for name in levelnet.__all__:
+        assert getattr(levelnet, name) is not None
+    with pytest.raises(AttributeError, match="no_such_name"):
+        _ = levelnet.no_such_name
