@@ -22,7 +22,8 @@ if TYPE_CHECKING:
     from .history.result import History
     from .history.run import solve
     from .history.setup import Setup, load_setup
-    from .store import read, write
+    from .store.read import read
+    from .store.write import write
 
 __version__ = "0.1.0"
 
@@ -41,13 +42,13 @@ _HOMES = {
     "load_setup": "history.setup",
     "photoionization_cross_section": "atomic.bound_free",
     "photoionization_rate": "atomic.bound_free",
-    "read": "store",
+    "read": "store.read",
     "recombination_coefficient": "atomic.bound_free",
     "solve": "history.run",
     "two_photon_profile": "atomic.two_photon",
     "two_photon_rate": "atomic.two_photon",
     "with_expansion": "background",
-    "write": "store",
+    "write": "store.write",
 }
 
 __all__ = [

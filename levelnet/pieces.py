@@ -140,7 +140,7 @@ class FolderPieces:
                     elif entry.name.endswith(_TEMPORARY_SUFFIX):
                         if time.time() - status.st_mtime > _DAY_S:
                             os.unlink(entry.path)
-        for _, path, size in sorted(others, reverse=True):
+        for _, path, size in sorted(others):
             if total <= self.max_bytes:
                 break
             with contextlib.suppress(OSError):

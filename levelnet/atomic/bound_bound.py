@@ -68,8 +68,8 @@ def einstein_a(
 
     Examples
     --------
-    >>> round(einstein_a(2, 1, 1, 0) / 1e8, 4)
-    6.2649
+    >>> print(f"{einstein_a(2, 1, 1, 0):.4e}")
+    6.2649e+08
     """
     upper, lower = (
         quantum_numbers("upper level", n, l),

@@ -117,8 +117,8 @@ def photoionization_cross_section(
 
     Examples
     --------
-    >>> round(photoionization_cross_section(1, 0, 0.0) * 1e18, 3)
-    6.311
+    >>> print(f"{photoionization_cross_section(1, 0, 0.0):.3e}")
+    6.311e-18
     """
     n_all, l_all = quantum_numbers("level", n, l)
     energy = np.asarray(electron_energy, float)
@@ -226,8 +226,8 @@ def recombination_coefficient(
 
     Examples
     --------
-    >>> round(recombination_coefficient(2, 0, 1e4) * 1e14, 2)
-    2.34
+    >>> print(f"{recombination_coefficient(2, 0, 1e4):.2e}")
+    2.34e-14
     """
     temperatures = [matter_temperature_k]
     if radiation_temperature_k is not None:

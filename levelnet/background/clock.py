@@ -77,6 +77,25 @@ def early_integrals_s(
     return np.stack([weighed.sum(axis=1), (weighed * growth).sum(axis=1)])
 
 
+@dataclass(frozen=True, slots=True, eq=False)
+class JoinedRate:
+    """The rate of a table, and of Friedmann's law above it."""
+
+    # A class, since closures do not pickle.
+
+    law: FriedmannLaw
+    table: ExpansionTable
+
+    def __call__(self, growth: FloatArray) -> FloatArray:
+        """H in s^-1 at growth = 1 + redshift, any shape."""
+        last = 1.0 + self.table.last_redshift
+        above = growth > last
+        # Rounding may put a node a hair outside either end of the table.
+        rate = self.table.rate_per_s(np.clip(growth, 1.0, last))
+        rate[above] = self.law.rate_per_s(growth[above])
+        return rate
+
+
 def law_clock(law: FriedmannLaw) -> Clock:
     """Clock of Friedmann's law."""
     first = _first_edge(law)
@@ -85,19 +104,10 @@ def law_clock(law: FriedmannLaw) -> Clock:
 
 def table_clock(law: FriedmannLaw, table: ExpansionTable) -> Clock:
     """Clock of a tabulated expansion; before its last redshift the law holds."""
-    join = 1.0 + table.last_redshift
-
-    def rate_per_s(growth: FloatArray) -> FloatArray:
-        above = growth > join
-        # Rounding may put a node a hair outside either end of the table.
-        rate = table.rate_per_s(np.clip(growth, 1.0, join))
-        rate[above] = law.rate_per_s(growth[above])
-        return rate
-
     # An edge on every row: a spline is smooth between its knots only.
     within = -np.log1p(table.redshift[::-1])
     before = np.linspace(min(_first_edge(law), within[0] - 1.0), within[0], 60)
-    return make_clock(rate_per_s, np.concatenate([before, within[1:]]))
+    return make_clock(JoinedRate(law, table), np.concatenate([before, within[1:]]))
 
 
 def _first_edge(law: FriedmannLaw) -> float:

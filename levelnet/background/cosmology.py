@@ -234,8 +234,9 @@ class Cosmology:
         Returns
         -------
         float or ndarray, same shape, s
-            Integral of dz/((1 + z) H) from the redshift up, exact to 1e-10 relative; with a tabulated expansion,
-            the part above the last row follows from the densities of the parameters.
+            Integral of dz/((1 + z) H) from the redshift up, exact to 1e-10 relative; with a
+            tabulated expansion, the part above the last row follows from the densities of the
+            parameters.
         """
         return self._integral(redshift, 0, 1.0)
 

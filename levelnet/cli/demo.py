@@ -60,7 +60,8 @@ def run(options: argparse.Namespace, console: Console) -> int:
     with whole_file(setup_file, options.force) as stream:
         stream.write(demo_text().encode())
     write(history, result_file, force=options.force)
-    figures = save_figures(history, folder, force=options.force)
+    with console.progress() as progress:
+        figures = save_figures(history, folder, force=options.force, progress=progress)
     total = time.monotonic() - start
     written = [setup_file, result_file, *figures]
     if options.json:

@@ -34,9 +34,11 @@ def _plain(value: Any) -> Any:
 
 
 def size_text(memory_bytes: float) -> str:
-    """Bytes as MiB or GiB."""
-    gib = memory_bytes / 2**30
-    return f"{gib:.1f} GiB" if gib >= 1.0 else f"{memory_bytes / 2**20:.0f} MiB"
+    """Bytes as MB, GB or TB, in powers of 1000."""
+    for unit, size in (("TB", 1e12), ("GB", 1e9)):
+        if memory_bytes >= size:
+            return f"{memory_bytes / size:.1f} {unit}"
+    return f"{memory_bytes / 1e6:.0f} MB"
 
 
 def time_text(seconds: float) -> str:

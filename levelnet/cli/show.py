@@ -55,11 +55,10 @@ def run(options: argparse.Namespace, console: Console) -> int:
     from ..store import read
 
     history = read(options.file)
+    written = _save_figures(history, folder, options, console)
     if options.csv == "-":
-        written = _save_figures(history, folder, options)
         _write_table(history, sys.stdout, options)
     else:
-        written = _save_figures(history, folder, options)
         if options.csv is not None:
             _write_table(history, Path(options.csv), options)
             written.append(Path(options.csv))
@@ -84,12 +83,16 @@ def _checked_places(options: argparse.Namespace) -> Path | None:
     return folder
 
 
-def _save_figures(history: History, folder: Path | None, options: argparse.Namespace) -> list[Path]:
+def _save_figures(
+    history: History, folder: Path | None, options: argparse.Namespace, console: Console
+) -> list[Path]:
     if folder is None:
         return []
     from ..report.figures import save_figures
 
-    return list(save_figures(history, folder, force=options.force, redshift=options.redshift))
+    with console.progress() as progress:
+        paths = save_figures(history, folder, options.force, options.redshift, progress)
+    return list(paths)
 
 
 def _write_table(history: History, target: Path | TextIO, options: argparse.Namespace) -> None:

@@ -19,6 +19,7 @@ if TYPE_CHECKING:
 
 _VECTOR_N_MAX = 60  # above, the cells of the map are drawn as pixels: 5e4 outlines choke a viewer
 _N_PANELS = 4
+_MOST_TICKS = 9
 _LETTERS = "spdf"
 
 
@@ -39,7 +40,8 @@ def departure_map_figure(
     Returns
     -------
     matplotlib Figure
-        ln b (dimensionless) in colour; one sign: cividis, both signs: a diverging map about 0.
+        ln b (dimensionless) in colour, logarithmic in its size. One sign: cividis, yellow is far
+        from equilibrium; both signs: a diverging map about 0.
 
     Raises
     ------
@@ -61,7 +63,10 @@ def departure_map_figure(
             cmap=colours,
             rasterized=n_max > _VECTOR_N_MAX,
         )
-        figure.colorbar(mesh, ax=axes, label=r"$\ln b_{nl}$", pad=0.03)
+        bar = figure.colorbar(mesh, ax=axes, label=r"$\ln b_{nl}$", pad=0.03)
+        ticks = _round_values(float(norm.vmin or 0.0), float(norm.vmax or 0.0))
+        bar.set_ticks(ticks, labels=[_number(value) for value in ticks], minor=False)
+        bar.minorticks_off()
         axes.set_xlabel(r"principal quantum number $n$")
         axes.set_ylabel(r"angular quantum number $l$")
         _whole_numbers(axes)
@@ -201,6 +206,27 @@ def _colour_scale(grid: FloatArray) -> tuple[Normalize, str]:
     if low < 0.0 < high:
         return SymLogNorm(linear, vmin=-size, vmax=size), "BrBG"
     return SymLogNorm(linear, vmin=low, vmax=high), "cividis" if high > 0.0 else "cividis_r"
+
+
+def _round_values(low: float, high: float) -> list[float]:
+    """Round values from `low` to `high`: as fine as leaves room for, each decade alike."""
+    size = max(abs(low), abs(high))
+    if size == 0.0:
+        return [0.0]
+    top = int(np.floor(np.log10(size)))
+    for factors in ((1, 1.5, 2, 3, 4, 5, 7), (1, 2, 5), (1,)):
+        sizes = [f * 10.0**k for k in range(top - 5, top + 1) for f in factors]
+        values = sorted({sign * one for one in sizes for sign in (-1.0, 1.0)} | {0.0})
+        inside = [one for one in values if low <= one <= high]
+        # Close to 0 the scale is linear: ticks there would fall onto one another.
+        kept = [one for one in inside if one == 0.0 or abs(one) > 0.02 * size or low * high > 0.0]
+        if len(kept) <= _MOST_TICKS:
+            break
+    return kept
+
+
+def _number(value: float) -> str:
+    return f"{value:g}".replace("-", "\N{MINUS SIGN}")
 
 
 def _whole_numbers(axes: Axes) -> None:

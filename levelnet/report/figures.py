@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import os
 import tempfile
+from collections.abc import Callable
 from pathlib import Path
 from typing import TYPE_CHECKING
 
@@ -45,7 +46,11 @@ def figure_paths(folder: str | Path) -> tuple[Path, ...]:
 
 
 def save_figures(
-    history: History, folder: str | Path, force: bool = False, redshift: float | None = None
+    history: History,
+    folder: str | Path,
+    force: bool = False,
+    redshift: float | None = None,
+    progress: Callable[[str, float], None] | None = None,
 ) -> tuple[Path, ...]:
     """Write all figures of `history` as SVG and PDF into `folder`, made where it is missing.
 
@@ -59,6 +64,8 @@ def save_figures(
         Replace figures that exist.
     redshift : float or None, dimensionless
         Redshift of the departure map.
+    progress : callable or None
+        ``progress(stage, fraction)``, called before each figure with 0 <= fraction < 1.
 
     Returns
     -------
@@ -78,7 +85,11 @@ def save_figures(
         raise InputError(f"{folder}: is a file, not a folder")
     # Drawn in memory first, so that a figure that fails leaves nothing behind.
     figures = make_figures(history, redshift)
-    drawn = [style.render(figures[path.stem], path.suffix[1:]) for path in paths]
+    drawn = []
+    for count, path in enumerate(paths):
+        if progress is not None:
+            progress("drawing figures", count / len(paths))
+        drawn.append(style.render(figures[path.stem], path.suffix[1:]))
     Path(folder).mkdir(parents=True, exist_ok=True)
     for path, data in zip(paths, drawn, strict=True):
         _write_bytes(path, data)

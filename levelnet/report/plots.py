@@ -50,12 +50,15 @@ def _draw_fractions(axes: Axes, history: History) -> None:
         shown = np.where(values > 0.0, values, np.nan)
         axes.plot(redshift, shown, dash, color=getattr(style, colour), label=label)
     axes.set_yscale("log")
-    axes.set_ylim(top=3.0)
+    smallest = np.minimum(history.free_electron_fraction, history.neutral_hydrogen_fraction)
+    # Far above recombination the neutral fraction falls without end.
+    axes.set_ylim(max(0.3 * float(np.min(smallest)), 1e-8), 3.0)
     axes.set_xlim(float(redshift[-1]), float(redshift[0]))
     axes.set_xlabel(r"redshift $z$")
     axes.set_ylabel("fraction of hydrogen nuclei")
     _mark_redshift(axes, history.milestones.half_ionized_redshift, "$x_e = 0.5$")
-    axes.legend(loc="best")
+    # Below the curves near 1 and above the tail of x_e.
+    axes.legend(loc="upper left", bbox_to_anchor=(0.0, 0.86))
 
 
 def _draw_temperatures(axes: Axes, history: History) -> None:
@@ -86,7 +89,7 @@ def channel_figure(history: History) -> Figure:
     """
     channels, redshift = history.channels, history.redshift
     with style.house_style():
-        figure = style.new_figure(style.TWO_COLUMNS_IN, 2.9)
+        figure = style.new_figure(style.TWO_COLUMNS_IN, 3.2)
         left, right = figure.subplots(1, 2)
         for axes, shares, letter in (
             (left, channels.share, "a"),
@@ -106,12 +109,13 @@ def channel_figure(history: History) -> Figure:
             axes.set_ylim(*_share_limits([values for _, values in curves]))
             axes.set_xlabel(r"redshift $z$")
             _mark_redshift(
-                axes, history.milestones.visibility_peak_redshift, "visibility peak", at_top=True
+                axes, history.milestones.visibility_peak_redshift, "peak of $g$", at_top=True
             )
             style.panel_letter(axes, letter)
         left.set_ylabel(r"share of the net rate to 1s at $z$")
         right.set_ylabel(r"cumulative share down to $z$")
-        left.legend(loc="best")
+        # Outside, since with many lines no corner is free.
+        figure.legend(*left.get_legend_handles_labels(), loc="outside upper center", ncols=3)
     return figure
 
 
@@ -187,8 +191,8 @@ def _smooth_visibility(history: History) -> tuple[FloatArray, FloatArray]:
 
 
 def _visible_range(redshift: FloatArray, curve: FloatArray) -> tuple[float, float]:
-    """Where the curve is worth a look: above 0.3 % of its peak, or everything without a peak."""
-    above = np.flatnonzero(curve > 3e-3 * np.max(curve))
+    """Where the curve is worth a look: above 1 % of its peak, or everything without a peak."""
+    above = np.flatnonzero(curve > 1e-2 * np.max(curve))
     if len(above) < 2:
         return float(redshift[0]), float(redshift[-1])
     return float(redshift[above[0]]), float(redshift[above[-1]])

@@ -33,7 +33,6 @@ _SETTINGS: dict[str, Any] = {
     "axes.labelsize": 8.5,
     "axes.titlesize": 8.5,
     "axes.linewidth": 0.7,
-    "axes.formatter.use_mathtext": True,
     "axes.unicode_minus": True,
     "lines.linewidth": 1.4,
     "legend.fontsize": 7.5,

@@ -284,4 +284,5 @@ def describe_layout() -> str:
             where = f"({', '.join(one.dimensions)})" if one.dimensions else ""
             units = "" if one.kind == "text" else f" [{one.units}]"
             lines.append(f"  {one.kind:7s} {one.name}{where}{units}: {one.long_name}")
+    lines += ["", "after the HDF5 data: one line with the sha256 of all bytes before it"]
     return "\n".join(lines) + "\n"

@@ -51,8 +51,7 @@ def read(path: str | Path) -> History:
         raise FileFormatError(f"{path}: {error}") from None
     except (InputError, ValueError, TypeError) as error:
         # The digest was right, so the file is as written: by hand, or by another version.
-        line = " ".join(str(error).split())
-        raise FileFormatError(f"{path}: does not make a history: {line}") from error
+        raise FileFormatError(f"{path}: does not make a history: {_line(error)}") from error
 
 
 def read_attributes(path: str | Path) -> dict[str, str | int]:
@@ -69,16 +68,21 @@ def read_content(path: str | Path) -> Content:
     except LevelnetError:
         raise
     except Damage as error:
-        raise FileFormatError(f"{path}: damaged: {error}") from None
+        raise FileFormatError(f"{path}: damaged: {_line(error)}") from None
     except MemoryError:
         raise FileFormatError(f"{path}: larger than the memory of this machine") from None
     except Exception as error:
         # Over damaged bytes h5py raises nearly any kind of exception.
-        line = " ".join(str(error).split()) or type(error).__name__
-        raise FileFormatError(f"{path}: damaged, truncated or not HDF5: {line}") from error
+        raise FileFormatError(f"{path}: damaged: {_line(error)}") from error
     if content.attributes["digest"] != content_digest(content):
         raise FileFormatError(f"{path}: damaged: the content does not have the digest it states")
     return content
+
+
+def _line(error: Exception) -> str:
+    """Text of an error as one line; names in a damaged file can be long and hold any bytes."""
+    text = " ".join(str(error).split()) or type(error).__name__
+    return "".join(letter if letter.isprintable() else "?" for letter in text[:300])
 
 
 def _check_bytes(path: Path) -> None:

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from functools import partial
+from math import factorial
 from typing import Any
 
 import mpmath
@@ -9,6 +11,7 @@ import numpy as np
 import pytest
 from scipy import constants as codata
 from scipy.integrate import quad
+from scipy.special import gamma
 
 from levelnet.arrays import FloatArray
 from levelnet.atomic.bound_free import (
@@ -60,29 +63,38 @@ def test_closed_forms(level: tuple[int, int]) -> None:
 
 
 @pytest.mark.parametrize(
-    ("n", "l", "k"), [(1, 0, 0.3), (2, 1, 1.0), (3, 1, 0.5), (4, 2, 0.2), (5, 4, 0.3), (6, 0, 0.4)]
+    ("n", "l", "k"),
+    [
+        (1, 0, 0.3),
+        (3, 1, 0.5),
+        (4, 2, 0.2),
+        pytest.param(2, 1, 1.0, marks=pytest.mark.slow),
+        pytest.param(5, 4, 0.3, marks=pytest.mark.slow),
+        pytest.param(6, 0, 0.4, marks=pytest.mark.slow),
+    ],
 )
 def test_against_coulomb_wave_functions(n: int, l: int, k: float) -> None:
-    # sigma = (4 pi^2 alpha/3) omega sum of l_>/(2l+1) |int P_nl r P_kl' dr|^2 a0^2 with P_kl' normalized
-    # per Hartree (Bethe & Salpeter 1957; from memory), the wave functions from mpmath.
+    # sigma = (4 pi^2 alpha/3) omega sum of l_>/(2l+1) |int P_nl r P_kl' dr|^2 a0^2 with P_kl'
+    # normalized per Hartree (Bethe & Salpeter 1957; from memory), the wave functions from mpmath.
     norm = mpmath.sqrt(
         (mpmath.mpf(2) / n) ** 3 * mpmath.factorial(n - l - 1) / (2 * n * mpmath.factorial(n + l))
     )
 
-    def integrand(r: Any, other: int) -> Any:
+    def integrand(other: int, r: Any) -> Any:
         rho = 2 * r / n
         bound = norm * mpmath.exp(-rho / 2) * rho**l * mpmath.laguerre(n - l - 1, 2 * l + 1, rho)
         free = mpmath.sqrt(2 / (mpmath.pi * k)) * mpmath.coulombf(other, -1 / mpmath.mpf(k), k * r)
         return bound * r**2 * free
 
     panels = list(np.linspace(0.0, 3.5 * n**2 + 35.0 * n, 2 * n + 3))
-    strength = sum(
-        mpmath.mpf(max(l, other)) / (2 * l + 1) * mpmath.quad(lambda r: integrand(r, other), panels) ** 2
-        for other in (l - 1, l + 1)
-        if other >= 0
-    )
+    strength = mpmath.mpf(0)
+    for other in (l - 1, l + 1) if l else (1,):
+        integral = mpmath.quad(partial(integrand, other), panels)
+        strength += max(l, other) * integral**2 / (2 * l + 1)
     omega = (1 / n**2 + k**2) / 2
-    expected = 4 * np.pi**2 * codata.fine_structure / 3 * omega * BOHR_RADIUS_CM**2 * float(strength)
+    expected = (
+        4 * np.pi**2 * codata.fine_structure / 3 * omega * BOHR_RADIUS_CM**2 * float(strength)
+    )
     # mpmath works with 15 digits here, and the integrands oscillate.
     assert photoionization_cross_section(n, l, k**2) == pytest.approx(expected, rel=1e-10)
 
@@ -167,7 +179,8 @@ def direct_recombination(n: int, l: int, kelvin: float, radiation: float | None)
     """Recombination coefficient by Gauss-Legendre panels in ln(energy), constants from scipy."""
     theta = codata.k * kelvin / CHI_J
     x, w = np.polynomial.legendre.leggauss(20)
-    edges = np.linspace(np.log(1e-16 * theta), np.log(60 * theta), 41)
+    # The integrand has the scale kT, or that of the cross section, 1/n^2 to 1/n^3.
+    edges = np.linspace(np.log(1e-14 * min(theta, 1 / n**3)), np.log(60 * theta), 61)
     half = np.diff(edges)[:, None] / 2
     energy = np.exp(edges[:-1, None] + half * (1 + x)).ravel()
     weight = (half * w).ravel() * energy
@@ -183,7 +196,7 @@ def direct_recombination(n: int, l: int, kelvin: float, radiation: float | None)
 
 
 @pytest.mark.parametrize("kelvin", [0.02, 1.0, 30.0, 3000.0, 3e4, 1e5])
-@pytest.mark.parametrize(("n", "l"), [(1, 0), (2, 1), (20, 7), (100, 0), (500, 0), (500, 300)])
+@pytest.mark.parametrize(("n", "l"), [(1, 0), (2, 1), (20, 7), (100, 0), (500, 0), (500, 499)])
 def test_the_rule_against_dense_quadrature(n: int, l: int, kelvin: float) -> None:
     for ratio in (None, 0.2, 1.0, 20.0):
         # A warm field over cold matter, and the other way round.
@@ -234,7 +247,9 @@ def test_textbook_coefficients_at_ten_thousand_kelvin() -> None:
     assert recombination_coefficient(1, 0, 1e4) == pytest.approx(1.58e-13, rel=published(3))
 
 
-@pytest.mark.parametrize(("n", "l", "kelvin"), [(1, 0, 2e4), (2, 0, 3000.0), (2, 1, 4000.0), (9, 4, 500.0)])
+@pytest.mark.parametrize(
+    ("n", "l", "kelvin"), [(1, 0, 2e4), (2, 0, 3000.0), (2, 1, 4000.0), (9, 4, 500.0)]
+)
 def test_photoionization_against_the_absorption_integral(n: int, l: int, kelvin: float) -> None:
     # The Milne relation: no second integral in the program, so here is one, by scipy.
     theta = codata.k * kelvin / CHI_J
@@ -298,7 +313,9 @@ def test_scaling_with_charge() -> None:
 def test_stimulated_part_vanishes_with_the_field() -> None:
     n, l = np.array([1, 2, 50]), np.array([0, 1, 20])
     spontaneous = recombination_coefficient(n, l, 300.0)
-    np.testing.assert_allclose(recombination_coefficient(n, l, 300.0, 0.02), spontaneous, rtol=1e-12)
+    np.testing.assert_allclose(
+        recombination_coefficient(n, l, 300.0, 0.02), spontaneous, rtol=1e-12
+    )
     assert np.all(recombination_coefficient(n[2], l[2], 300.0, 3000.0) > 5 * spontaneous[2])
 
 
@@ -307,11 +324,16 @@ def test_the_rule_is_small_and_positive() -> None:
     assert len(grid.energy) == len(grid.weight) == 100
     assert np.all(np.diff(grid.energy) > 0)
     assert np.all(grid.weight > 0)
-    # int exp(-x) dx = 1 and int x^2 exp(-x) dx = 2, in units of kT = 0.01 chi.
+    # int x^p exp(-x) dx = p!, in units of kT = 0.01 chi. The error of the trapezoid rule in ln(x)
+    # is twice the Fourier transform of the integrand at the spacing, |Gamma(p + 1 + 2 pi i/h)|
+    # (Trefethen & Weideman 2014, SIAM Rev. 56, 385).
     x = grid.energy / 0.01
-    for power, expected in ((0, 1.0), (2, 2.0)):
+    frequency = 2 * np.pi / np.log(x[1] / x[0])
+    for power in range(4):
         total = np.sum(grid.weight / 0.01 * x**power * np.exp(-x))
-        assert total == pytest.approx(expected, rel=RECOMBINATION)
+        predicted = 2 * abs(gamma(power + 1 + 1j * frequency))
+        assert abs(total - factorial(power)) < 1.01 * predicted + 1e-13 * factorial(power)
+    assert 2 * abs(gamma(1 + 1j * frequency)) < RECOMBINATION
 
 
 def test_kernel_against_its_own_source() -> None:
@@ -340,7 +362,10 @@ def test_broadcasting_and_scalars() -> None:
     [
         (lambda: photoionization_cross_section(2, 2, 0.0), "0 <= l < n"),
         (lambda: photoionization_cross_section(1001, 2, 0.0), "1000"),
-        (lambda: photoionization_cross_section(2, 1, -0.1), "electron_energy = -0.1: allowed are 0"),
+        (
+            lambda: photoionization_cross_section(2, 1, -0.1),
+            "electron_energy = -0.1: allowed are 0",
+        ),
         (lambda: photoionization_cross_section(2, 1, [1.0, 101.0]), "electron_energy = 101"),
         (lambda: photoionization_cross_section(2, 1, np.nan), "electron_energy = nan"),
         (lambda: recombination_coefficient(2, 1, 0.0), "0 K: allowed are 0.02 to 100000 K"),

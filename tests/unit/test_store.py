@@ -338,8 +338,7 @@ def run_python(
         [sys.executable, "-c", program, *arguments],
         env=environment, capture_output=True, text=True, timeout=120, check=False,
     )  # fmt: skip
-    if not hash_seed or done.returncode > 0:
-        raise AssertionError(done.stderr)
+    assert done.returncode <= 0, done.stderr  # below 0: killed, where a test wants it
     return done
 
 
