@@ -19,6 +19,7 @@ from .errors import InputError
 
 T = TypeVar("T")
 
+_LONGEST = 60  # characters of a bad value that a complaint repeats
 _CONFIG = ConfigDict(extra="forbid", strict=True, allow_inf_nan=False, arbitrary_types_allowed=True)
 
 
@@ -46,6 +47,8 @@ def from_mapping(cls: type) -> BeforeValidator:
         # Text goes through JSON mode, where pydantic nests by itself and keeps the full path.
         if info.mode == "python" and isinstance(value, Mapping):
             return build(cls, value)
+        if isinstance(value, Mapping):  # text has lists where records hold tuples
+            return {k: tuple(v) if isinstance(v, list) else v for k, v in value.items()}
         return value
 
     return BeforeValidator(convert)
@@ -81,4 +84,6 @@ def _complaint(item: Any, record: Any) -> str:
     message = str(item["msg"]).removeprefix("Value error, ")
     if isinstance(item["input"], dict):
         return f"{path}: {message}"
-    return f"{path} = {item['input']!r}: {message[0].lower()}{message[1:]}"
+    value = repr(item["input"])
+    value = value if len(value) <= _LONGEST else f"{value[:_LONGEST]}..."
+    return f"{path} = {value}: {message[0].lower()}{message[1:]}"

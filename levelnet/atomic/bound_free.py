@@ -36,6 +36,7 @@ __all__ = [
     "photoionization_rate",
     "photon_energy_ev",
     "recombination_coefficient",
+    "recombination_weights",
     "spectral_recombination",
     "thermal_volume_cm3",
 ]
@@ -135,6 +136,37 @@ def photoionization_cross_section(
         nodes, position = np.unique(energy[here], return_inverse=True)
         sigma[here] = _shell_cross_section(int(shell), nodes, charge)[l_all[here], position]
     return sigma[()]
+
+
+def recombination_weights(
+    atom: BoundFree,
+    radiation_temperature_k: float | None = None,
+    occupation: Occupation | None = None,
+) -> FloatArray:
+    """What turns a cross section into spectral recombination, for every shell at once.
+
+    Parameters
+    ----------
+    atom : BoundFree
+        Cross sections.
+    radiation_temperature_k : float, K, optional
+        Temperature of the blackbody that stimulates recombination; None: no stimulated part.
+    occupation : callable, optional
+        Photon occupation number as a function of photon energy in eV, in place of a blackbody.
+
+    Returns
+    -------
+    ndarray, shape (n_max, n_nodes), cm^-2 s^-1
+        W = (8 pi nu^2/c^2) (1 + f) d(nu), so that alpha_nl(T_m) = thermal_volume_cm3(T_m) (2l+1) times
+        the sum over nodes of maxwell_factor(T_m) W sigma_nl; row n - 1 is shell n.
+
+    References
+    ----------
+    Milne 1924, Phil. Mag. 47, 209 (relation of recombination to photoionization).
+    """
+    energy_ev = photon_energy_ev(np.arange(1, atom.n_max + 1), atom.grid, atom.charge)
+    enhancement = 1.0 + _occupation_number(energy_ev, radiation_temperature_k, occupation)
+    return _mode_rate(energy_ev, atom.grid, atom.charge) * enhancement
 
 
 def spectral_recombination(

@@ -104,10 +104,10 @@ class Setup:
 
     cosmology: Annotated[Cosmology, from_mapping(Cosmology)]
     hydrogen: Annotated[Hydrogen, from_mapping(Hydrogen)]
-    helium: Annotated[Helium, from_mapping(Helium)] = Helium()  # noqa: RUF009 (frozen)
-    lines: Annotated[Lines, from_mapping(Lines)] = Lines()  # noqa: RUF009
-    grid: Annotated[Grid, from_mapping(Grid)] = Grid()  # noqa: RUF009
-    accuracy: Annotated[Accuracy, from_mapping(Accuracy)] = Accuracy()  # noqa: RUF009
+    helium: Annotated[Helium, from_mapping(Helium)] = Helium()
+    lines: Annotated[Lines, from_mapping(Lines)] = Lines()
+    grid: Annotated[Grid, from_mapping(Grid)] = Grid()
+    accuracy: Annotated[Accuracy, from_mapping(Accuracy)] = Accuracy()
     title: str = ""
 
     def __post_init__(self) -> None:
@@ -142,7 +142,7 @@ def parse_setup(text: str, where: str = "setup") -> Setup:
     """Read a setup from TOML text; every complaint is listed at once with its path."""
     try:
         values = tomllib.loads(text)
-    except tomllib.TOMLDecodeError as error:
+    except (ValueError, RecursionError) as error:  # TOMLDecodeError is a ValueError; so are huge numbers
         raise InputError(f"{where}: not valid TOML: {error}") from None
     try:
         return build(Setup, values)

@@ -16,7 +16,7 @@ from scipy import sparse
 
 from .. import constants as const
 from ..arrays import FloatArray
-from ..atomic.bound_free import spectral_recombination, thermal_volume_cm3
+from ..atomic.bound_free import recombination_weights, thermal_volume_cm3
 from ..atomic.detailed_balance import log_saha_factor
 from ..atomic.levels import ionization_scale_ev
 from ..kernels.assembly import symmetric_blocks
@@ -148,12 +148,13 @@ def recombination_coefficients(
     kt = const.BOLTZMANN_EV_K * matter_temperature_k
     grid = ladder.bound_free.grid
     spread = np.exp(-grid.energy * (ionization_scale_ev(ladder.charge) / kt))
+    weights = recombination_weights(ladder.bound_free, radiation_temperature_k) * spread
     alpha = np.zeros(len(ladder.levels))
     for n in range(2, ladder.n_max + 1):
         first = n * (n - 1) // 2
-        spectrum = spectral_recombination(ladder.bound_free, n, radiation_temperature_k)
-        alpha[first : first + n] = spectrum @ spread
-    return alpha * thermal_volume_cm3(matter_temperature_k, ladder.charge)
+        alpha[first : first + n] = ladder.bound_free.cross_section_cm2[n - 1] @ weights[n - 1]
+    volume = thermal_volume_cm3(matter_temperature_k, ladder.charge)
+    return alpha * (0.5 * ladder.levels.statistical_weight * volume)
 
 
 def factor_interior(

@@ -28,8 +28,8 @@ import numpy as np
 
 from .. import constants as const
 from ..arrays import FloatArray, IntArray
-from ..atomic.bound_free import spectral_recombination, thermal_volume_cm3
-from ..atomic.detailed_balance import log_saha_factor
+from ..atomic.bound_free import recombination_weights, thermal_volume_cm3
+from ..atomic.detailed_balance import log_saha_factor, log_upward_ratio
 from ..atomic.levels import ionization_scale_ev
 from ..numerics.chebyshev import ChebyshevSeries, chebyshev_nodes
 from .assembly import FactoredInterior, Workspace, factor_interior
@@ -157,12 +157,13 @@ def _log_exchange(factored: FactoredInterior, pairs: Pairs, fates: FloatArray) -
 
 
 def _log_spectrum(ladder: Ladder, temperature_k: float, fates: FloatArray) -> FloatArray:
-    spectrum = np.zeros((len(ladder.kept), len(ladder.bound_free.grid.energy)))
+    weights = recombination_weights(ladder.bound_free, temperature_k)
+    weighted = fates * (0.5 * ladder.levels.statistical_weight)
+    spectrum = np.zeros((len(ladder.kept), weights.shape[1]))
     for n in range(2, ladder.n_max + 1):
         first = n * (n - 1) // 2
-        spectrum += fates[:, first : first + n] @ spectral_recombination(
-            ladder.bound_free, n, temperature_k
-        )
+        shell = weighted[:, first : first + n] @ ladder.bound_free.cross_section_cm2[n - 1]
+        spectrum += shell * weights[n - 1]
     return np.log(np.maximum(spectrum, 1e-300))
 
 
@@ -371,8 +372,7 @@ def _rate_error(
 
 def _electron_spread(ladder: Ladder, temperature_k: float) -> FloatArray:
     """exp(-e/kT) on the electron energies of the quadrature."""
-    kt = const.BOLTZMANN_EV_K * temperature_k
-    return np.exp(-ladder.bound_free.grid.energy * (ionization_scale_ev(ladder.charge) / kt))
+    return np.exp(-ladder.bound_free.grid.energy * (_chi_over_k(ladder) / temperature_k))
 
 
 def _assemble_rates(
@@ -386,55 +386,47 @@ def _assemble_rates(
     """From stored logarithms to rates, their inverses and slopes."""
     kept, n_pairs = ladder.kept, len(pairs.lower)
     spectrum = np.exp(value[n_pairs:].reshape(len(kept), -1))
-    spectrum_slope = slope[n_pairs:].reshape(len(kept), -1)
-    at_matter = _capture(ladder, spectrum, spectrum_slope, matter_k)
-    at_radiation = _capture(ladder, spectrum, spectrum_slope, radiation_k)
+    spectrum_slope = spectrum * slope[n_pairs:].reshape(len(kept), -1)
+    # Both temperatures at once: columns are T_m and T_r.
+    temperature = np.array([matter_k, radiation_k])
+    reach = np.multiply.outer(ladder.bound_free.grid.energy, _chi_over_k(ladder) / temperature)
+    spread = np.exp(-reach)
+    total = spectrum @ spread
+    slope_radiation = (spectrum_slope @ spread) / total
+    slope_matter = (spectrum @ (reach * spread)) / total - 1.5
+    capture = total * thermal_volume_cm3(temperature, ladder.charge)
     log_saha = log_saha_factor(
         kept.statistical_weight, kept.ionization_energy_ev, radiation_k, ladder.charge
     )
     kt = const.BOLTZMANN_EV_K * radiation_k
-    saha_slope = -1.5 - kept.ionization_energy_ev / kt
-    exchange, exchange_slope = _exchange_matrices(
-        kept, pairs, value[:n_pairs], slope[:n_pairs], kt
-    )
     return ReducedRates(
-        at_matter[0],
-        at_matter[1],
-        at_matter[2],
-        np.log(at_radiation[0]) - log_saha,
-        at_radiation[1] + at_radiation[2] - saha_slope,
-        exchange,
-        exchange_slope,
+        capture[:, 0],
+        slope_radiation[:, 0],
+        slope_matter[:, 0],
+        np.log(capture[:, 1]) - log_saha,
+        slope_radiation[:, 1] + slope_matter[:, 1] + 1.5 + kept.ionization_energy_ev / kt,
+        *_exchange_matrices(kept, pairs, value[:n_pairs], slope[:n_pairs], radiation_k),
     )
 
 
-def _capture(
-    ladder: Ladder, spectrum: FloatArray, spectrum_slope: FloatArray, matter_k: float
-) -> tuple[FloatArray, FloatArray, FloatArray]:
-    """A_i, and its logarithmic slopes in T_r and in T_m."""
-    kt = const.BOLTZMANN_EV_K * matter_k
-    reach = ladder.bound_free.grid.energy * (ionization_scale_ev(ladder.charge) / kt)
-    weighted = spectrum * np.exp(-reach)
-    total = weighted.sum(axis=1)
-    return (
-        total * thermal_volume_cm3(matter_k, ladder.charge),
-        (weighted * spectrum_slope).sum(axis=1) / total,
-        weighted @ reach / total - 1.5,
-    )
+def _chi_over_k(ladder: Ladder) -> float:
+    """Ionization scale of the ion in kelvin."""
+    return ionization_scale_ev(ladder.charge) / const.BOLTZMANN_EV_K
 
 
 def _exchange_matrices(
-    kept: KeptLevels, pairs: Pairs, log_rate: FloatArray, slope: FloatArray, kt_ev: float
+    kept: KeptLevels, pairs: Pairs, log_rate: FloatArray, slope: FloatArray, radiation_k: float
 ) -> tuple[FloatArray, FloatArray]:
     """R_ij and d ln R_ij / d ln T_r, the upward direction by detailed balance."""
     i, j = pairs.lower, pairs.upper
     rate, rate_slope = np.zeros((2, len(kept), len(kept)))
-    barrier = pairs.barrier_ev / kt_ev
-    rise = (kept.energy_ev[j] - kept.energy_ev[i]) / kt_ev
+    kt = const.BOLTZMANN_EV_K * radiation_k
+    barrier = pairs.barrier_ev / kt
+    rise = kept.energy_ev[j] - kept.energy_ev[i]
     log_down = log_rate - barrier
-    log_weight = np.log(kept.statistical_weight[j] / kept.statistical_weight[i])
+    weights = kept.statistical_weight[j], kept.statistical_weight[i]
     rate[j, i] = np.exp(log_down)
-    rate[i, j] = np.exp(log_down + log_weight - rise)
+    rate[i, j] = np.exp(log_down + log_upward_ratio(*weights, rise, radiation_k))
     rate_slope[j, i] = slope + barrier
-    rate_slope[i, j] = slope + barrier + rise
+    rate_slope[i, j] = slope + barrier + rise / kt
     return rate, rate_slope

@@ -49,12 +49,12 @@ class ChebyshevSeries:
         t = min(1.0, max(-1.0, t))
         order = np.arange(len(self.coefficients))
         angle = np.arccos(t)
-        first = np.cos(order * angle)
+        basis = np.empty((2, len(order)))
+        np.cos(order * angle, out=basis[0])
         # dT_k/dt = k U_{k-1}; the ends are the limits k^2 (+-1)^(k-1).
         if 1.0 - abs(t) < 1e-14:
-            second = order**2 * np.where(order % 2 == 0, np.sign(t), 1.0)
+            basis[1] = order**2 * np.where(order % 2 == 0, np.sign(t), 1.0)
         else:
-            second = order * np.sin(order * angle) / np.sin(angle)
-        basis = np.stack([first, second / half])
+            basis[1] = order * np.sin(order * angle) / np.sin(angle)
         value, slope = basis @ self.coefficients
-        return value, slope
+        return value, slope / half
