@@ -7,6 +7,7 @@ from numpy.typing import NDArray
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
+BoolArray = NDArray[np.bool_]
 
 
 def frozen_array(record: Any, name: str, shape: tuple[int, ...], dtype: type = np.float64) -> None:
@@ -15,7 +16,7 @@ def frozen_array(record: Any, name: str, shape: tuple[int, ...], dtype: type = n
     A frozen dataclass alone does not freeze an array; a mistake in shape is the program's, so it
     raises ValueError and not an InputError.
     """
-    values = np.array(getattr(record, name), dtype=dtype)
+    values: NDArray[Any] = np.array(getattr(record, name), dtype=dtype)
     if values.shape != shape:
         raise ValueError(f"{type(record).__name__}.{name}: shape {values.shape}, expected {shape}")
     values.flags.writeable = False

@@ -50,9 +50,10 @@ PROTON_MASS_G = ELECTRON_MASS_G / ELECTRON_PROTON_MASS_RATIO
 HYDROGEN_ATOM_MASS_G = PROTON_MASS_G + ELECTRON_MASS_G
 HELIUM_HYDROGEN_MASS_RATIO = HELIUM_MASS_U / HYDROGEN_MASS_U
 
-# Measured ionization energy of hydrogen, 109678.77174307 cm^-1 (NIST Atomic Spectra Database, ground
-# state of H I; the value agrees with 13.598434599702 eV in the mendeleev package to 1e-9 eV).
+# Measured ionization energy of hydrogen, 109678.77174307 cm^-1 (NIST Atomic Spectra Database,
+# ground state of H I; the value agrees with 13.598434599702 eV in the mendeleev package to 1e-9
+# eV).
 HYDROGEN_IONIZATION_PER_CM = 109678.77174307
-# Lamb shift of the hydrogen 1s level, 8172.8 MHz (from memory; scaled as n^-3 for the ns levels, which
-# reproduces the measured 2s level to 0.001 cm^-1).
+# Lamb shift of the hydrogen 1s level, 8172.8 MHz (from memory; scaled as n^-3 for the ns levels,
+# which reproduces the measured 2s level to 0.001 cm^-1).
 HYDROGEN_1S_LAMB_SHIFT_HZ = 8.1728e9

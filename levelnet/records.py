@@ -37,7 +37,8 @@ def checked_record(cls: type[T]) -> type[T]:
             raise InputError(explain(error, record)) from None
 
     record.__init__ = checked_init
-    return record
+    checked: type[T] = record
+    return checked
 
 
 def from_mapping(cls: type) -> BeforeValidator:

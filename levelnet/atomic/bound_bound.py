@@ -84,7 +84,7 @@ def einstein_a(
             f"({n_l.flat[first]}, {l_l.flat[first]}): "
             "allowed are n > n_lower and l_lower = l - 1 or l + 1"
         )
-    flat = [np.ascontiguousarray(values.ravel()) for values in (n_u, l_u, n_l, l_l)]
+    flat = [values.flatten() for values in (n_u, l_u, n_l, l_l)]
     integral = bound_start(flat[0], flat[2])
     radial.line_integrals(flat[0], flat[1], flat[2], flat[3], integral)
     omega = transition_frequency(n_u, n_l)

@@ -157,8 +157,8 @@ def recombination_weights(
     Returns
     -------
     ndarray, shape (n_max, n_nodes), cm^-2 s^-1
-        W = (8 pi nu^2/c^2) (1 + f) d(nu), so that alpha_nl(T_m) = thermal_volume_cm3(T_m) (2l+1) times
-        the sum over nodes of maxwell_factor(T_m) W sigma_nl; row n - 1 is shell n.
+        W = (8 pi nu^2/c^2) (1 + f) d(nu), so that alpha_nl(T_m) = thermal_volume_cm3(T_m) (2l+1)
+        times the sum over nodes of maxwell_factor(T_m) W sigma_nl; row n - 1 is shell n.
 
     References
     ----------

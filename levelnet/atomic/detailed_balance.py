@@ -7,6 +7,8 @@ holds to rounding whatever the error of the rates.
 
 from __future__ import annotations
 
+from typing import NamedTuple
+
 import numpy as np
 from numpy.typing import ArrayLike
 
@@ -87,6 +89,39 @@ def upward_rate(
     return np.asarray(downward_rate, float) * _exp(log_ratio)
 
 
+class SahaCoefficients(NamedTuple):
+    """What :func:`log_saha_factor` needs of the levels: offset - 1.5 ln T + ionization / T.
+
+    Attributes
+    ----------
+    offset : ndarray, dimensionless
+        ln[(g/2) lambda^3(1 K)], lambda^3 in cm^3.
+    ionization_k : ndarray, K
+        Ionization energy over the Boltzmann constant.
+    """
+
+    offset: FloatArray
+    ionization_k: FloatArray
+
+    def log_factor(self, temperature_k: float | FloatArray) -> FloatArray:
+        """ln[(g/2) lambda^3 exp(I/kT)] at positive temperatures, unchecked."""
+        factor: FloatArray = (
+            self.offset - 1.5 * np.log(temperature_k) + self.ionization_k / temperature_k
+        )
+        return factor
+
+
+def saha_coefficients(
+    statistical_weight: ArrayLike, ionization_energy_ev: ArrayLike, charge: int = 1
+) -> SahaCoefficients:
+    """Prepare the Saha factors of many levels; arguments as for :func:`log_saha_factor`."""
+    weight = np.asarray(statistical_weight, float) / ELECTRON_WEIGHT
+    return SahaCoefficients(
+        np.log(weight * thermal_volume_cm3(1.0, charge)),
+        np.asarray(ionization_energy_ev, float) / const.BOLTZMANN_EV_K,
+    )
+
+
 def log_saha_factor(
     statistical_weight: ArrayLike,
     ionization_energy_ev: ArrayLike,
@@ -116,11 +151,8 @@ def log_saha_factor(
     ----------
     Saha 1920, Phil. Mag. 40, 472.
     """
-    temperature = _positive_temperature(temperature_k)
-    boltzmann = np.asarray(ionization_energy_ev) / (const.BOLTZMANN_EV_K * temperature)
-    weight = np.log(np.asarray(statistical_weight, float) / ELECTRON_WEIGHT)
-    log_factor: FloatArray = weight + np.log(thermal_volume_cm3(temperature, charge)) + boltzmann
-    return log_factor
+    levels = saha_coefficients(statistical_weight, ionization_energy_ev, charge)
+    return levels.log_factor(_positive_temperature(temperature_k))
 
 
 def photoionization_from_recombination(

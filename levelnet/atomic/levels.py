@@ -47,8 +47,8 @@ def binding_energy_ev(n: IntArray, l: IntArray, energies: str, charge: int = 1) 
     Notes
     -----
     Averaging the Dirac fine structure over j with weights 2j + 1 gives
-    chi/n^2 [1 + (alpha^2/n^2) (n/(l + 1/2) - 3/4)] for l > 0, and n/1 in place of n/(l + 1/2) for l = 0
-    (Bethe & Salpeter 1957, Quantum Mechanics of One- and Two-Electron Atoms, sec. 12-13; from
+    chi/n^2 [1 + (alpha^2/n^2) (n/(l + 1/2) - 3/4)] for l > 0, and n/1 in place of n/(l + 1/2) for l
+    = 0 (Bethe & Salpeter 1957, Quantum Mechanics of One- and Two-Electron Atoms, sec. 12-13; from
     memory). Good to 0.003 cm^-1 for n = 2 and 3 against the measured levels.
     """
     n_float, l_float = np.asarray(n, float), np.asarray(l, float)

@@ -21,7 +21,8 @@ class Hydrogen:
         non-relativistic 8.22487 s^-1 times the leading relativistic correction (-3.5e-5); published
         values run from 8.2206 to 8.2290, so carry 5e-4.
     energies : "measured" or "nonrelativistic"
-        Level energies: fine-structure centroids with the measured ionization energy 13.598434 eV, or
+        Level energies: fine-structure centroids with the measured ionization energy 13.598434 eV,
+        or
         -chi/n^2 with chi = 13.59829 eV. The choice is worth about 1.5e-4 in x_e.
     """
 

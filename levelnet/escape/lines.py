@@ -20,13 +20,14 @@ class Lines:
     Parameters
     ----------
     hydrogen : "closed", "open" or "sobolev"
-        Treatment of the Lyman lines: no escape at all (two-photon only), optically thin, or Sobolev.
+        Treatment of the Lyman lines: no escape at all (two-photon only), optically thin, or
+        Sobolev.
     two_photon : "spontaneous" or "stimulated"
         2s-1s decay without or with stimulation by the blackbody. Stimulation alone, without the
         absorption of line photons by 1s -> 2s, overstates its effect (Kholupenko & Ivanchik 2006).
     lyman_lines : int >= 1, or "all"
-        How many Lyman lines, from Lyman-alpha up, exchange photons with the ground state; the others
-        are closed: np -> 1s is left out of the network. The default 1 is the better
+        How many Lyman lines, from Lyman-alpha up, exchange photons with the ground state; the
+        others are closed: np -> 1s is left out of the network. The default 1 is the better
         approximation of the truth: a photon that escapes a high Lyman line is absorbed in the
         next line below, so isolated high lines add escape without end.
     """

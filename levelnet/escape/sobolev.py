@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import numpy as np
 
-from .. import constants as const
 from ..arrays import FloatArray
 from ..errors import InputError
 
@@ -34,8 +33,8 @@ def sobolev_optical_depth(
     Returns
     -------
     ndarray, shape (n_lines,), dimensionless
-        tau = (g_u/g_l) A lambda^3 n_l / (8 pi H). Stimulated emission, n_u g_l / (n_l g_u) below 1e-8 for
-        the Lyman lines of a recombining universe, is left out.
+        tau = (g_u/g_l) A lambda^3 n_l / (8 pi H). Stimulated emission, n_u g_l / (n_l g_u) below
+        1e-8 for the Lyman lines of a recombining universe, is left out.
 
     References
     ----------
@@ -85,7 +84,7 @@ def escape_probability(optical_depth: FloatArray) -> FloatArray:
 
 
 def escape_slope(optical_depth: FloatArray) -> FloatArray:
-    """d ln P / d ln tau of the Sobolev escape probability: 0 at zero depth, -1 at large depth."""
+    """D ln P / d ln tau of the Sobolev escape probability: 0 at zero depth, -1 at large depth."""
     depth = np.asarray(optical_depth, dtype=np.float64)
     safe = np.where(depth > 1e-8, depth, 1.0)
     thick = safe * np.exp(-safe) / -np.expm1(-safe) - 1.0

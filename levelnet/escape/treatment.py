@@ -181,9 +181,11 @@ class Sobolev(_WithoutMemory):
         "No continuum absorbs inside the line.",
     )
     holds_for: ClassVar[tuple[str, ...]] = (
-        "Time to cross the thick part of the line far below a Hubble time (crossing_time_hubble << 1). "
+        "Time to cross the thick part of the line far below a Hubble time "
+        "(crossing_time_hubble << 1). "
         "Lyman-alpha at z ~ 1100 leaves that range; two-photon wings, recoil and diffusion then "
-        "change x_e by 1 to 2 per cent (Hirata 2008, Phys. Rev. D 78, 023001; Chluba & Sunyaev 2009, "
+        "change x_e by 1 to 2 per cent (Hirata 2008, Phys. Rev. D 78, 023001; "
+        "Chluba & Sunyaev 2009, "
         "Astron. Astrophys. 503, 345).",
     )
 

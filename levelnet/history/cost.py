@@ -6,7 +6,7 @@ import os
 from dataclasses import dataclass
 
 from ..errors import InputError
-from ..network.reduction import node_count
+from ..network.tabulation import node_count
 from .setup import Setup
 
 # Measured on one core of a 2 GHz-class x86-64 server: sustained rate of the factorization for large
@@ -38,8 +38,8 @@ class Cost:
 def estimate(setup: Setup) -> Cost:
     """Estimate memory and time of a run from its sizes.
 
-    Three cubes of n_max^3/3 numbers (line strengths, couplings, factors), the cross sections, and the
-    populations at every output redshift.
+    Three cubes of n_max^3/3 numbers (line strengths, couplings, factors), the cross sections, and
+    the populations at every output redshift.
     """
     n = setup.hydrogen.n_max
     n_out = len(setup.grid.redshifts or ()) or setup.grid.n_redshifts
@@ -67,13 +67,14 @@ def check_memory(setup: Setup) -> Cost:
         raise InputError(f"hydrogen.n_max = {n}: {figure}, {_readable(available)} available")
     if n > HIGHEST_N:
         raise InputError(
-            f"hydrogen.n_max = {n}: {figure}; rates are tested up to {HIGHEST_N}, the highest allowed"
+            f"hydrogen.n_max = {n}: {figure}; the highest allowed is {HIGHEST_N}, "
+            "up to which rates are tested"
         )
     return cost
 
 
 def available_memory_bytes() -> float:
-    """Memory this process may still take: what the system reports, less what a container forbids."""
+    """Memory this process may still take, by the system and by the limits of a container."""
     pages = os.sysconf("SC_AVPHYS_PAGES") * os.sysconf("SC_PAGE_SIZE")
     limits = [_available_from_proc() or pages]
     for path in ("/sys/fs/cgroup/memory.max", "/sys/fs/cgroup/memory/memory.limit_in_bytes"):

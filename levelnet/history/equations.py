@@ -1,14 +1,14 @@
 """The slow variables: their rates of change and the analytic Jacobian.
 
-The variables are u = ln(x_HII/x_HI) and v = ln(T_m/T_r), the time is s = ln a. Then x_HII and x_HI follow
-from u to full relative precision at both ends, an absolute error of u is a relative error of either
-fraction, and the tiny difference of the two temperatures is carried as such:
+The variables are u = ln(x_HII/x_HI) and v = ln(T_m/T_r), the time is s = ln a. Then x_HII and x_HI
+follow from u to full relative precision at both ends, an absolute error of u is a relative error of
+either fraction, and the tiny difference of the two temperatures is carried as such:
 
     du/ds = -F / (H x_HII x_HI),        F the net recombinations per hydrogen nucleus and second,
     dv/ds = -1 + (Gamma/H) (e^-v - 1),  Gamma the Compton rate.
 
-The heat that recombining electrons take along, of order (dx_e/dt)/Gamma or 1e-6 of T_m at most where it
-counts, is left out (common practice).
+The heat that recombining electrons take along, of order (dx_e/dt)/Gamma or 1e-6 of T_m at most
+where it counts, is left out (common practice).
 """
 
 from __future__ import annotations
@@ -24,8 +24,8 @@ from ..background.conditions import Conditions
 from ..background.cosmology import Cosmology
 from ..background.matter import compton_rate_per_s
 from ..escape.treatment import LineTreatment, ResonanceLines
-from ..escape.two_photon import two_photon_coupling
-from ..network.coupling import GroundCoupling, combine
+from ..escape.two_photon import with_two_photon
+from ..network.coupling import GroundCoupling
 from ..network.reduced import Reduced, ReducedRates
 from ..network.solve import FlowSlopes, KeptSolution, flow_slopes, solve_kept
 
@@ -123,11 +123,12 @@ class SlowEquations:
         rates = self.reduced.rates(
             conditions.radiation_temperature_k, conditions.matter_temperature_k
         )
-        coupling = combine(
+        coupling = with_two_photon(
             self.treatment.couple(self.lines, kept, conditions, None, 0.0),
-            two_photon_coupling(
-                kept, conditions, self.two_photon_rate_per_s, self.two_photon_mode
-            ),
+            kept,
+            conditions,
+            self.two_photon_rate_per_s,
+            self.two_photon_mode,
         )
         return Local(conditions, rates, coupling, solve_kept(kept, rates, coupling, conditions))
 
@@ -169,9 +170,8 @@ class SlowEquations:
     ) -> tuple[float, float]:
         """Derivatives of F, less what the prefactor 1/(H x_HII x_HI) takes, by u and by s."""
         ionized = slopes.ln_electron_fraction + slopes.ln_ionized_fraction
-        by_odds = (
-            c.ground_fraction * (ionized - flow)
-            - c.ionized_fraction * (slopes.ln_ground_fraction - flow)
+        by_odds = c.ground_fraction * (ionized - flow) - c.ionized_fraction * (
+            slopes.ln_ground_fraction - flow
         )
         by_time = (
             -slopes.ln_radiation_temperature

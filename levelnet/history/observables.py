@@ -1,7 +1,7 @@
 """What the history looks like to an observer: optical depth, visibility, last scattering.
 
-Every integral runs over the integrated range only, from the lowest redshift of the run upwards; there is
-no reionization in it.
+Every integral runs over the integrated range only, from the lowest redshift of the run upwards;
+there is no reionization in it.
 
     tau(z) = int_{z_end}^{z} c sigma_T n_e / (H (1 + z)) dz,     g(eta) = (d tau/d eta) exp(-tau)
 """
@@ -114,7 +114,7 @@ def _peak_and_width(x: FloatArray, log_visibility: CubicSpline) -> tuple[float, 
     level = float(log_visibility(peak)) - np.log(2.0)
 
     def above(y: float) -> float:
-        return float(log_visibility(y)) - level
+        return float(log_visibility(y)) - float(level)
 
     low = np.flatnonzero(values[:top] < level)
     high = np.flatnonzero(values[top:] < level)

@@ -14,7 +14,7 @@ from ..background.conditions import Conditions
 from ..errors import Outcome
 from ..network.assembly import Workspace, factor_interior
 from ..network.populations import LevelPopulations, populations
-from ..network.reduction import TabulatedReduction
+from ..network.tabulation import TabulatedReduction
 from ..numerics.stepping import Trajectory
 from .equations import Local, SlowEquations, ionized_and_neutral
 from .observables import Visibility, dense_growth, milestones, visibility
@@ -27,7 +27,7 @@ if TYPE_CHECKING:
 
 _SMALLEST_LOG = math.log(1e-300)
 SLOW_RELAXATION = 100.0
-"""Relaxation rate of the kept levels over the Hubble rate below which "quasi-steady" is doubtful."""
+"""Relaxation over Hubble rate of the kept levels below which "quasi-steady" is doubtful."""
 
 
 class _Output(NamedTuple):
@@ -91,7 +91,8 @@ def state_at(integrated: Integrated, log_scale: float) -> FloatArray:
         return equilibrium_state(integrated.equations, log_scale)[0]
     trajectory = integrated.trajectory
     nearest = int(np.argmin(np.abs(trajectory.time - log_scale)))
-    return trajectory.state[nearest]
+    state: FloatArray = trajectory.state[nearest]
+    return state
 
 
 def _outputs(integrated: Integrated, redshift: FloatArray, tell: Progress) -> list[_Output]:
@@ -137,9 +138,7 @@ def _species(integrated: Integrated, outputs: list[_Output]) -> SpeciesPopulatio
 
 def _channels(integrated: Integrated, redshift: FloatArray, outputs: list[_Output]) -> Channels:
     kept = integrated.ladder.kept
-    names = tuple(
-        f"{n}{'sp'[l]}-1s" for n, l in zip(kept.n.tolist(), kept.l.tolist(), strict=True)
-    )
+    names = tuple(f"{n}{'sp'[l]}-1s" for n, l in zip(kept.n.tolist(), kept.l.tolist(), strict=True))
     net = np.array([o.local.solution.flow for o in outputs])
     share = net / net.sum(axis=1, keepdims=True)
     cumulative = _cumulative(integrated.equations, integrated.trajectory)(-np.log1p(redshift))
@@ -168,7 +167,9 @@ def _line_figures(integrated: Integrated, outputs: list[_Output]) -> LineFigures
     for output in outputs:
         figures, conditions = output.local.coupling.validity, output.local.conditions
         doppler = doppler_width(conditions)
-        natural = lines.decay_rate_per_s / (4.0 * np.pi * doppler * lines.energy_ev / const.PLANCK_EV_S)
+        natural = lines.decay_rate_per_s / (
+            4.0 * np.pi * doppler * lines.energy_ev / const.PLANCK_EV_S
+        )
         depth.append(figures["optical_depth"])
         chance.append(figures["escape_probability"])
         damping.append(natural)
@@ -184,25 +185,24 @@ def _line_figures(integrated: Integrated, outputs: list[_Output]) -> LineFigures
 def doppler_width(conditions: Conditions) -> float:
     """Doppler width over frequency of a hydrogen line, sqrt(2 k T_m / m_H) / c."""
     speed = math.sqrt(
-        2.0
-        * const.BOLTZMANN_ERG_K
-        * conditions.matter_temperature_k
-        / const.HYDROGEN_ATOM_MASS_G
+        2.0 * const.BOLTZMANN_ERG_K * conditions.matter_temperature_k / const.HYDROGEN_ATOM_MASS_G
     )
     return speed / const.SPEED_OF_LIGHT_CM_S
 
 
 def _diagnostics(integrated: Integrated, outputs: list[_Output], slowest: float) -> Diagnostics:
     trajectory, reduced = integrated.trajectory, integrated.equations.reduced
-    tabulated = isinstance(reduced, TabulatedReduction)
+    nodes, error = 0, 0.0
+    if isinstance(reduced, TabulatedReduction):
+        nodes, error = reduced.n_nodes, reduced.interpolation_error
     return Diagnostics(
         integrated.handover.redshift,
         integrated.handover.departure,
         len(trajectory.time) - 1,
         trajectory.rejected,
         trajectory.evaluations,
-        reduced.n_nodes if tabulated else 0,
-        reduced.interpolation_error if tabulated else 0.0,
+        nodes,
+        error,
         max((o.levels.conservation_error for o in outputs), default=0.0),
         slowest,
     )

@@ -112,8 +112,8 @@ class LineFigures:
 class Milestones:
     """Numbers that sum up a history; NaN where the grid does not reach the event.
 
-    All integrals run over the integrated range only, from the lowest output redshift up; there is no
-    reionization in them. Definitions: g(eta) = (d tau/d eta) exp(-tau), eta conformal time.
+    All integrals run over the integrated range only, from the lowest output redshift up; there is
+    no reionization in them. Definitions: g(eta) = (d tau/d eta) exp(-tau), eta conformal time.
 
     Attributes
     ----------
@@ -145,8 +145,8 @@ class Diagnostics:
     handover_redshift : float
         Where Saha equilibrium hands over to the integration.
     handover_departure : float
-        Relative difference there between the neutral fraction in Saha equilibrium and the
-        quasi-steady one the equations ask for.
+        Relative lag of the neutral fraction there behind Saha equilibrium; the integration starts
+        with this lag, and with that of the matter temperature, already in.
     steps, rejected_steps, evaluations : int
         Counts of the integration.
     nodes : int
@@ -156,8 +156,8 @@ class Diagnostics:
     conservation_error : float
         Largest relative imbalance of the populations at the output redshifts.
     slowest_relaxation_hubble : float
-        Slowest relaxation rate of the kept levels over the Hubble rate, smallest over the outputs; the
-        quasi-steady assumption needs it far above 1.
+        Slowest relaxation rate of the kept levels over the Hubble rate, smallest over the outputs;
+        the quasi-steady assumption needs it far above 1.
     """
 
     handover_redshift: float
@@ -205,8 +205,12 @@ class History:
         n_e / n_H, all hydrogen nuclei.
     ionized_hydrogen_fraction, neutral_hydrogen_fraction : ndarray, dimensionless
         Of hydrogen nuclei; both to full relative precision, neither formed as 1 - x.
-    neutral_helium_fraction, singly_ionized_helium_fraction, doubly_ionized_helium_fraction : ndarray
-        Of helium nuclei, dimensionless.
+    neutral_helium_fraction : ndarray, dimensionless
+        Of helium nuclei.
+    singly_ionized_helium_fraction : ndarray, dimensionless
+        Of helium nuclei.
+    doubly_ionized_helium_fraction : ndarray, dimensionless
+        Of helium nuclei.
     matter_temperature_k, radiation_temperature_k : ndarray, K
         Temperatures.
     hydrogen_density_cm3 : ndarray, cm^-3

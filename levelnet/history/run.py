@@ -11,17 +11,12 @@ import numpy as np
 from threadpoolctl import threadpool_limits
 
 from ..arrays import FloatArray
-from ..errors import AccuracyWarning, Outcome
-from ..escape.treatment import LineTreatment, treatment as member
+from ..errors import AccuracyWarning
+from ..escape.treatment import LineTreatment
+from ..escape.treatment import treatment as member
 from ..escape.two_photon import STIMULATED_NOTE
 from ..network.ladder import Ladder
-from ..network.reduction import (
-    LiveReduction,
-    TabulatedReduction,
-    exchange_pairs,
-    node_count,
-    tabulate,
-)
+from ..network.tabulation import TabulatedReduction, live_reduction, node_count, tabulate
 from ..numerics.stepping import Trajectory, integrate
 from ..pieces import Pieces, code_digest, content_key
 from .atom import build_ladder, lyman_lines
@@ -35,7 +30,8 @@ from .start import Handover, equilibrium_state, find_handover
 Progress = Callable[[str, float], None]
 
 # Local error allowed in one step over the error asked of the whole. The equations forget, so local
-# errors hardly add up: with 1.0 the neutral fraction was measured to 0.6 and x_e to 0.03 of what is asked.
+# errors hardly add up: with 1.0 the neutral fraction was measured to 0.6 and x_e to 0.03 of what is
+# asked.
 _LOCAL = 0.5
 # Size of the atom that finds the hand-over: it depends on the lowest levels only.
 _SCOUT_N = 6
@@ -83,8 +79,8 @@ def solve(
     progress : callable, optional
         ``progress(stage, fraction)``, called now and then with 0 <= fraction <= 1.
     pieces : Pieces, optional
-        Store of reduced networks, such as ``levelnet.pieces.FolderPieces(folder)``; a repeated run with
-        the same atom then skips the reduction.
+        Store of reduced networks, such as ``levelnet.pieces.FolderPieces(folder)``; a repeated run
+        with the same atom then skips the reduction.
     line_treatment : LineTreatment, optional
         A treatment of the resonance lines of your own, in place of the one the setup names.
     strict : bool
@@ -106,8 +102,8 @@ def solve(
     Notes
     -----
     Excited levels are quasi-steady. The error of x_e from stepping and interpolation is below
-    ``setup.accuracy.relative``; what the chosen physics leaves out (line transfer, collisions, helium) is
-    larger and listed in ``history.notes``.
+    ``setup.accuracy.relative``; what the chosen physics leaves out (line transfer, collisions,
+    helium) is larger and listed in ``history.notes``.
 
     References
     ----------
@@ -154,13 +150,12 @@ def _equations(
 ) -> SlowEquations:
     return SlowEquations(
         setup.cosmology,
-        table or LiveReduction(ladder, exchange_pairs(ladder)),
+        table or live_reduction(ladder),
         lyman_lines(ladder),
         chosen,
         setup.hydrogen.two_photon_rate_per_s,
         setup.lines.two_photon,
     )
-
 
 
 def _output_redshifts(setup: Setup) -> FloatArray:
@@ -180,7 +175,8 @@ def _table(
     """Reduce the network over the whole range of T_r of the run, from store where it can."""
     low = setup.cosmology.radiation_temperature_k(float(setup.grid.redshift_end))
     high = setup.cosmology.radiation_temperature_k(highest)
-    # Round outwards, so that equal atoms share their nodes whatever the redshifts, and the ends are inside.
+    # Round outwards, so that equal atoms share their nodes whatever the redshifts, and the ends are
+    # inside.
     low_k, high_k = 0.999 * float(low), 1.001 * float(high)
     tolerance = table_tolerance(setup)
     expected = node_count(low_k, high_k, tolerance) + 7

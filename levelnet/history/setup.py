@@ -25,8 +25,8 @@ class Grid:
     Parameters
     ----------
     redshift_start, redshift_end : float, dimensionless
-        First (highest) and last redshift of the output. The integration itself always starts in Saha
-        equilibrium, at a redshift it chooses and reports.
+        First (highest) and last redshift of the output. The integration itself always starts in
+        Saha equilibrium, at a redshift it chooses and reports.
     n_redshifts : int, 2 to 100000
         Number of output redshifts, evenly spaced in ln(1 + z), where `redshifts` is not given.
     redshifts : tuple of float, dimensionless, or None
@@ -62,13 +62,13 @@ class Accuracy:
     Parameters
     ----------
     relative : float, 1e-9 to 1e-3 (dimensionless)
-        Largest relative error of the slow variables (ionized and neutral fraction, T_m) from stepping
-        and from interpolating the reduced network.
+        Largest relative error of the slow variables (ionized and neutral fraction, T_m) from
+        stepping and from interpolating the reduced network.
     max_steps : int, 10 to 1000000
         Limit on the number of steps.
     interpolate : bool
-        True: reduce the network at Chebyshev nodes in ln T_r and interpolate. False: reduce it at every
-        evaluation (slow; for checking).
+        True: reduce the network at Chebyshev nodes in ln T_r and interpolate. False: reduce it at
+        every evaluation (slow; for checking).
     """
 
     relative: Annotated[float, Field(ge=1e-9, le=1e-3)] = 1e-6
@@ -115,7 +115,8 @@ class Setup:
         count, n_max = self.lines.lyman_lines, self.hydrogen.n_max
         if isinstance(count, int) and count > n_max - 1:
             raise ValueError(
-                f"lines.lyman_lines = {count}: hydrogen.n_max = {n_max} has only {n_max - 1} Lyman lines"
+                f"lines.lyman_lines = {count}: hydrogen.n_max = {n_max} has only "
+                f"{n_max - 1} Lyman lines"
             )
 
     def to_toml(self) -> str:
@@ -142,7 +143,10 @@ def parse_setup(text: str, where: str = "setup") -> Setup:
     """Read a setup from TOML text; every complaint is listed at once with its path."""
     try:
         values = tomllib.loads(text)
-    except (ValueError, RecursionError) as error:  # TOMLDecodeError is a ValueError; so are huge numbers
+    except (
+        ValueError,
+        RecursionError,
+    ) as error:  # TOMLDecodeError is a ValueError; so are huge numbers
         raise InputError(f"{where}: not valid TOML: {error}") from None
     try:
         return build(Setup, values)
@@ -166,8 +170,8 @@ def load_setup(path: str | Path) -> Setup:
     Raises
     ------
     InputError
-        If the file cannot be read or any key is unknown, missing, of the wrong type or out of range;
-        the text lists every complaint with its path.
+        If the file cannot be read or any key is unknown, missing, of the wrong type or out of
+        range; the text lists every complaint with its path.
     """
     try:
         text = Path(path).read_text(encoding="utf-8")

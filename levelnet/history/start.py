@@ -27,8 +27,7 @@ class Handover:
     redshift : float, dimensionless
         Where Saha equilibrium is left.
     departure : float, dimensionless
-        Relative difference there between the neutral fraction in Saha equilibrium and the
-        quasi-steady one.
+        Lag of the neutral fraction there behind Saha equilibrium, relative.
     """
 
     redshift: float
@@ -48,9 +47,11 @@ def equilibrium_state(equations: SlowEquations, log_scale: float) -> tuple[Float
     Returns
     -------
     state : ndarray, shape (2,)
-        u = u_Saha + (du_Saha/ds)/J with J = d(du/ds)/du, and v = -H/Gamma.
+        (u_Saha, 0) + J^-1 (du_Saha/ds, 1), J the Jacobian: the lag of ionization behind the
+        expansion, v = -H/Gamma, and what the cooler matter does to ionization.
     lag : float
-        The first-order lag of u.
+        The lag of u behind the expansion alone, (du_Saha/ds)/(d(du/ds)/du); infinite where nothing
+        holds hydrogen in equilibrium.
     """
 
     def saha(s: float) -> float:
@@ -66,8 +67,10 @@ def equilibrium_state(equations: SlowEquations, log_scale: float) -> tuple[Float
     drift = (saha(log_scale + step) - saha(log_scale - step)) / (2.0 * step)
     state = np.array([saha(log_scale), 0.0])
     matrix, _ = equations.jacobian(log_scale, state)
-    lag = drift / matrix[0, 0]
-    return state + np.array([lag, 1.0 / matrix[1, 1]]), float(lag)
+    if matrix[0, 0] == 0.0:
+        return state, math.inf
+    shift = np.linalg.solve(matrix, np.array([drift, 1.0]))
+    return state + shift, float(drift / matrix[0, 0])
 
 
 def find_handover(equations: SlowEquations, tolerance: float) -> Handover:
@@ -76,7 +79,8 @@ def find_handover(equations: SlowEquations, tolerance: float) -> Handover:
     Raises
     ------
     InputError
-        If hydrogen is never close enough to equilibrium (no channel to the ground state to speak of).
+        If hydrogen is never close enough to equilibrium (no channel to the ground state to speak
+        of).
     """
 
     def excess(log_growth: float) -> float:

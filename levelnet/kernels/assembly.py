@@ -2,68 +2,116 @@
 
 import math
 
+import numpy as np
+from numpy.typing import NDArray
+
 from .compile import kernel
+
+FloatArray = NDArray[np.float64]
+IntArray = NDArray[np.int64]
+
+
+@kernel
+def _fill(
+    strength: FloatArray,
+    geometric: FloatArray,
+    stretch: FloatArray,
+    rise: float,
+    shift: FloatArray,
+    live: FloatArray,
+    weight: float,
+    downward: FloatArray,
+    out: FloatArray,
+) -> None:
+    """Couplings of one level to a run of levels, all above (rise = -1) or all below it (rise = 1).
+
+    `shift` is relative to the level's own. Branch-free, so that it runs in vector registers.
+    """
+    for j in range(out.shape[0]):
+        # e^-a to third order in a, the effect of fine structure on the occupation number.
+        a = rise * stretch[j] * shift[j]
+        value = strength[j] * geometric[j] * ((2.0 - a) / (2.0 + a)) * live[j]
+        out[j] = value
+        downward[j] += value * weight
 
 
 @kernel
 def symmetric_blocks(
-    n_max,
-    first_n,
-    strength,
-    strength_start,
-    geometric,
-    stretch,
-    start,
-    coupling_start,
-    root_weight,
-    shift,
-    idle,
-    sink,
-    upward,
-    downward,
-    diagonal,
-    coupling,
-):
+    n_max: int,
+    first_n: IntArray,
+    strength: FloatArray,
+    strength_start: IntArray,
+    geometric: FloatArray,
+    stretch: FloatArray,
+    start: IntArray,
+    coupling_start: IntArray,
+    root_weight: FloatArray,
+    shift: FloatArray,
+    live: FloatArray,
+    sink: FloatArray,
+    upward: FloatArray,
+    downward: FloatArray,
+    diagonal: FloatArray,
+    coupling: FloatArray,
+) -> None:
     """Fill the coupling buffer B, the total outflow D and the outflow to the block below.
 
-    Block l holds the levels n = first_n[l] .. n_max of angular momentum l.
+    Block l holds the levels n = first_n[l] .. n_max of angular momentum l; n_unknowns in all.
 
     Parameters
     ----------
-    strength : A sqrt(g_u/g_l) in s^-1, block l at strength_start[l], rows n = l+1.., columns n' = l+2..
-    geometric, stretch : shape (n_max + 1, n_max + 1), indexed by (n, n'): 1/(2 sinh(x/2)) and
-        coth(x/2)/2, x = non-relativistic transition energy over kT.
-    root_weight : square root of the Boltzmann weight of each level.
-    shift : energy of each level above its non-relativistic energy, over kT.
-    idle : True for a level that takes no part; its sink must be positive.
-    sink : outflow of each level from the network, s^-1.
-    upward, downward : work space; on exit `downward` is the outflow to block l - 1, scaled.
-    diagonal : D, total outflow of each level, s^-1.
-    coupling : B = S / sqrt(D D'), S the geometric mean of the two directions of each line.
+    n_max : int
+        Highest n.
+    first_n : ndarray of int, shape (n_max,)
+        Lowest n of each block.
+    strength : ndarray
+        A sqrt(g_u/g_l) in s^-1; block l at strength_start[l], rows n = l+1.., columns n' = l+2...
+    strength_start, start, coupling_start : ndarray of int
+        Where blocks begin in `strength`, in vectors, and in `coupling`.
+    geometric, stretch : ndarray, shape (n_max + 1, n_max + 1)
+        1/(2 sinh(x/2)) and coth(x/2)/2 by (n, n'), x the non-relativistic line energy over kT.
+    root_weight, shift, live, sink : ndarray, shape (n_unknowns,)
+        Square root of the Boltzmann weight; energy above the non-relativistic one over kT; 0 for
+        a level that takes no part, else 1; outflow from the network in s^-1, positive where live
+        is 0.
+    upward, downward : ndarray, shape (n_unknowns,)
+        Work space; on exit `downward` is the outflow to block l - 1, scaled.
+    diagonal : ndarray, shape (n_unknowns,)
+        D, total outflow of each level, s^-1.
+    coupling : ndarray
+        B = S / sqrt(D D'), S the geometric mean of the two directions of each line.
     """
     n_blocks = first_n.shape[0]
     upward[:] = 0.0
     downward[:] = 0.0
+    relative = np.empty(n_max + 1)
     for l in range(n_blocks - 1):
-        columns = n_max - l - 1
-        above = n_max + 1 - first_n[l + 1]
+        low, columns = first_n[l + 1], n_max - l - 1
+        above = n_max + 1 - low
+        first = start[l + 1]
         for n in range(first_n[l], n_max + 1):
             i = start[l] + n - first_n[l]
-            row = strength_start[l] + (n - l - 1) * columns - (l + 2)
-            out = coupling_start[l] + (n - first_n[l]) * above - first_n[l + 1]
+            row = strength_start[l] + (n - l - 1) * columns + low - l - 2
+            begin = coupling_start[l] + (n - first_n[l]) * above
+            for j in range(above):
+                relative[j] = shift[i] - shift[first + j]
+            middle = min(max(n - low, 0), above)
+            for a, b, rise in ((0, middle, 1.0), (middle, above, -1.0)):
+                _fill(
+                    strength[row + a : row + b],
+                    geometric[n, low + a : low + b],
+                    stretch[n, low + a : low + b],
+                    rise,
+                    relative[a:b],
+                    live[first + a : first + b],
+                    root_weight[i] * live[i],
+                    downward[first + a : first + b],
+                    coupling[begin + a : begin + b],
+                )
             total = 0.0
-            for other in range(first_n[l + 1], n_max + 1):
-                j = start[l + 1] + other - first_n[l + 1]
-                # e^-a to third order in a, the effect of fine structure on the occupation number.
-                a = stretch[n, other] * (shift[i] - shift[j])
-                if n < other:
-                    a = -a
-                value = strength[row + other] * geometric[n, other] * ((2.0 - a) / (2.0 + a))
-                if idle[i] or idle[j]:
-                    value = 0.0
-                coupling[out + other] = value
-                total += value * root_weight[j]
-                downward[j] += value * root_weight[i]
+            for j in range(above):
+                coupling[begin + j] *= live[i]
+                total += coupling[begin + j] * root_weight[first + j]
             upward[i] = total
     for i in range(diagonal.shape[0]):
         diagonal[i] = (upward[i] + downward[i]) / root_weight[i] + sink[i]
@@ -73,6 +121,6 @@ def symmetric_blocks(
         above = n_max + 1 - first_n[l + 1]
         for i in range(n_max + 1 - first_n[l]):
             scale = upward[start[l] + i]
-            out = coupling_start[l] + i * above
+            begin = coupling_start[l] + i * above
             for j in range(above):
-                coupling[out + j] *= scale * upward[start[l + 1] + j]
+                coupling[begin + j] *= scale * upward[start[l + 1] + j]

@@ -2,18 +2,33 @@
 
 The same algorithm as :mod:`levelnet.numerics.block_cholesky`, for blocks too small to pay for a
 library call each. Flat buffers: the coupling of block l to block l + 1 is stored C-ordered, shape
-(size[l], size[l + 1]), at ``coupling_start[l]``; the factor of block l, shape (size[l], size[l]), at
-``factor_start[l]``; vectors at ``start[l]``.
+(size[l], size[l + 1]), at ``coupling_start[l]``; the factor of block l, shape (size[l], size[l]),
+at ``factor_start[l]``; vectors at ``start[l]``.
 """
 
 import math
 
+import numpy as np
+from numpy.typing import NDArray
+
 from .compile import kernel
+
+FloatArray = NDArray[np.float64]
+IntArray = NDArray[np.int64]
 
 
 @kernel
-def _fold_in(b, above, low, high, rows, excess, factor_high, block):
-    """Eliminate the block above: rows <- rows L^-T, block <- -(rows rows^T), excess carried down."""
+def _fold_in(
+    b: int,
+    above: int,
+    low: int,
+    high: int,
+    rows: FloatArray,
+    excess: FloatArray,
+    factor_high: FloatArray,
+    block: FloatArray,
+) -> None:
+    """Eliminate the block above: rows <- rows L^-T, block <- -(rows rows^T); carry excess down."""
     for i in range(b):
         row = i * above
         for j in range(above):
@@ -39,7 +54,9 @@ def _fold_in(b, above, low, high, rows, excess, factor_high, block):
 
 
 @kernel
-def _conserving_cholesky(b, weight, carried, block):
+def _conserving_cholesky(
+    b: int, weight: FloatArray, carried: FloatArray, block: FloatArray
+) -> bool:
     """Set the diagonal to the sum of outflows, then factor in place; False if not positive."""
     for i in range(b):
         total = carried[i]
@@ -65,11 +82,21 @@ def _conserving_cholesky(b, weight, carried, block):
 
 
 @kernel
-def factor_small(size, start, coupling_start, factor_start, weight, outflow, excess, coupling, factor):
+def factor_small(
+    size: IntArray,
+    start: IntArray,
+    coupling_start: IntArray,
+    factor_start: IntArray,
+    weight: FloatArray,
+    outflow: FloatArray,
+    excess: FloatArray,
+    coupling: FloatArray,
+    factor: FloatArray,
+) -> int:
     """Factor I - (B + B^T), high blocks first, with the conserving diagonal.
 
-    On entry `coupling` holds B (all entries >= 0), on exit X = B L^-T; `excess` is used up. Returns 0,
-    or 1 + l where block l is not positive definite.
+    On entry `coupling` holds B (all entries >= 0), on exit X = B L^-T; `excess` is used up. Returns
+    0, or 1 + l where block l is not positive definite.
     """
     n_blocks = size.shape[0]
     for block in range(n_blocks - 1, -1, -1):
@@ -89,7 +116,15 @@ def factor_small(size, start, coupling_start, factor_start, weight, outflow, exc
 
 
 @kernel
-def solve_small(size, start, coupling_start, factor_start, coupling, factor, right):
+def solve_small(
+    size: IntArray,
+    start: IntArray,
+    coupling_start: IntArray,
+    factor_start: IntArray,
+    coupling: FloatArray,
+    factor: FloatArray,
+    right: FloatArray,
+) -> None:
     """Solve H x = r in place; `right` has shape (n_right, n_unknowns)."""
     n_blocks = size.shape[0]
     for column in range(right.shape[0]):

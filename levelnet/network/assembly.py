@@ -1,10 +1,10 @@
 """The rate matrix of the interior at one radiation temperature, factored; and the whole as CSR.
 
-Symmetric form. With Boltzmann weights w_i = g_i exp(-E_i/kT_r) detailed balance gives R_ij w_i = R_ji w_j,
-and the geometric mean of both directions of a line is S = A sqrt(g_u/g_l) / (2 sinh(h nu / 2kT_r)).
-The row matrix A = D - R (D total outflow) is then A = V^-1 D^1/2 H D^1/2 V with V = diag(sqrt w) and
-H = 1 - D^-1/2 S D^-1/2, symmetric positive definite. Below COLD_K the weights leave the doubles and the
-same matrix is factored without symmetry.
+Symmetric form. With Boltzmann weights w_i = g_i exp(-E_i/kT_r) detailed balance gives R_ij w_i =
+R_ji w_j, and the geometric mean of both directions of a line is S = A sqrt(g_u/g_l) / (2 sinh(h nu
+/ 2kT_r)). The row matrix A = D - R (D total outflow) is then A = V^-1 D^1/2 H D^1/2 V with V =
+diag(sqrt w) and H = 1 - D^-1/2 S D^-1/2, symmetric positive definite. Below COLD_K the weights
+leave the doubles and the same matrix is factored without symmetry.
 """
 
 from __future__ import annotations
@@ -24,8 +24,8 @@ from ..numerics.block_cholesky import BlockCholesky, factor_symmetric
 from ..numerics.block_lu import BlockLU, factor_general
 from .ladder import Ladder, lines_of, transition_over_kt
 
-# sqrt(w) spans e^(1.51 eV / 2kT), which reaches e^320 here; doubles end at e^709 and products of two
-# such factors occur.
+# sqrt(w) spans e^(1.51 eV / 2kT), which reaches e^320 here; doubles end at e^709 and products of
+# two such factors occur.
 COLD_K = 27.4
 
 
@@ -96,7 +96,8 @@ class FactoredInterior:
             return self.solver.solve(rates)
         root = np.exp(self.log_root_weight)
         scale = np.sqrt(self.diagonal)
-        return self.solver.solve(rates * (root / scale)) / (root * scale)
+        chance: FloatArray = self.solver.solve(rates * (root / scale)) / (root * scale)
+        return chance
 
     def log_populations(self, log_source: FloatArray) -> FloatArray:
         """Natural log of interior populations fed by exp(`log_source`), shape (n_unknowns,).
@@ -105,11 +106,13 @@ class FactoredInterior:
         """
         if isinstance(self.solver, BlockLU):
             top = log_source.max()
-            return top + np.log(self.solver.solve_transposed(np.exp(log_source - top)[None])[0])
+            cold: FloatArray = self.solver.solve_transposed(np.exp(log_source - top)[None])[0]
+            return np.asarray(top + np.log(cold))
         scaled = log_source - self.log_root_weight - 0.5 * np.log(self.diagonal)
         top = scaled.max()
         solution = self.solver.solve(np.exp(scaled - top)[None])[0]
-        return top + np.log(solution) + self.log_root_weight - 0.5 * np.log(self.diagonal)
+        log_scale = self.log_root_weight - 0.5 * np.log(self.diagonal)
+        return np.asarray(top + np.log(solution) + log_scale)
 
 
 @dataclass(slots=True, eq=False)
@@ -144,7 +147,7 @@ def interior_photoionization(ladder: Ladder, temperature_k: float) -> FloatArray
 def recombination_coefficients(
     ladder: Ladder, radiation_temperature_k: float, matter_temperature_k: float
 ) -> FloatArray:
-    """alpha of every level but the ground state, cm^3 s^-1, shape (n_levels,); [0] = 0."""
+    """Alpha of every level but the ground state, cm^3 s^-1, shape (n_levels,); [0] = 0."""
     kt = const.BOLTZMANN_EV_K * matter_temperature_k
     grid = ladder.bound_free.grid
     spread = np.exp(-grid.energy * (ionization_scale_ev(ladder.charge) / kt))
@@ -212,9 +215,7 @@ def kept_line_rates(ladder: Ladder, kept: int, temperature_k: float) -> KeptLine
     rises = ladder.levels.n[position] > ladder.levels.n[own]
     lower, upper = np.where(rises, own, position), np.where(rises, position, own)
     log_up, log_down = log_line_rates(ladder, lower, upper, strength, temperature_k)
-    return KeptLines(
-        position, np.where(rises, log_up, log_down), np.where(rises, log_down, log_up)
-    )
+    return KeptLines(position, np.where(rises, log_up, log_down), np.where(rises, log_down, log_up))
 
 
 def log_line_rates(
@@ -224,10 +225,10 @@ def log_line_rates(
     strength: FloatArray,
     temperature_k: float,
 ) -> tuple[FloatArray, FloatArray]:
-    """ln of the rates up and down of lines in a blackbody, s^-1.
+    """Ln of the rates up and down of lines in a blackbody, s^-1.
 
-    The same expansion in the fine structure as the compiled assembly: exact in the Boltzmann factor,
-    third order in the occupation number.
+    The same expansion in the fine structure as the compiled assembly: exact in the Boltzmann
+    factor, third order in the occupation number.
     """
     plain, actual = transition_over_kt(ladder, lower, upper, temperature_k)
     a = 0.5 / np.tanh(0.5 * plain) * (actual - plain)
@@ -257,7 +258,7 @@ def _factor_warm(
         inside.shape.coupling_start,
         root,
         ladder.energy_excess_ev[inside.position] / kt,
-        inside.idle,
+        np.where(inside.idle, 0.0, 1.0),
         sink,
         upward,
         downward,
@@ -349,7 +350,7 @@ def rate_matrix(ladder: Ladder, radiation_temperature_k: float) -> sparse.csr_ar
         values += [np.exp(log_up), np.exp(log_down)]
     size = len(ladder.levels) - 1
     row, column, value = (np.concatenate(part) for part in (rows, columns, values))
-    outflow = np.bincount(column, weights=value, minlength=size)
-    outflow += interior_photoionization(ladder, radiation_temperature_k)[1:]
+    lines = np.bincount(column, weights=value, minlength=size).astype(np.float64)
+    outflow = lines + interior_photoionization(ladder, radiation_temperature_k)[1:]
     rates = sparse.coo_array((value, (row, column)), shape=(size, size))
     return sparse.csr_array(sparse.diags_array(outflow) - rates)

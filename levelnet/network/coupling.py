@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 
@@ -22,8 +22,8 @@ class GroundCoupling:
     slope_column, slope_temperature : ndarray, shape (n_kept, n_kept), s^-1
         dK/d ln(n_1s/H) and dK/d ln T_r, for the implicit step.
     excess_source : ndarray, shape (n_kept,), s^-1
-        s less K times the Boltzmann populations at T_r over the ground state: exactly zero where the
-        field outside the lines is a blackbody.
+        s less K times the Boltzmann populations at T_r over the ground state: exactly zero where
+        the field outside the lines is a blackbody.
     memory : object
         What the treatment must remember to the next step; the network never looks inside.
     validity : mapping of str to ndarray
@@ -49,8 +49,8 @@ def blackbody_coupling(
 ) -> GroundCoupling:
     """Coupling of levels that each lose `loss` (a vector) into a blackbody field.
 
-    The source follows from detailed balance: s = K x_B, x_B the populations in Boltzmann equilibrium
-    with the ground state at T_r.
+    The source follows from detailed balance: s = K x_B, x_B the populations in Boltzmann
+    equilibrium with the ground state at T_r.
     """
     return GroundCoupling(
         np.diag(loss),
@@ -63,14 +63,27 @@ def blackbody_coupling(
     )
 
 
-def combine(first: GroundCoupling, second: GroundCoupling) -> GroundCoupling:
-    """Add two couplings, such as Lyman lines and two-photon decay; memory is the first one's."""
-    return GroundCoupling(
-        first.loss + second.loss,
-        first.source + second.source,
-        first.slope_column + second.slope_column,
-        first.slope_temperature + second.slope_temperature,
-        first.excess_source + second.excess_source,
-        first.memory,
-        {**second.validity, **first.validity},
-    )
+def with_decay(
+    coupling: GroundCoupling, kept: int, rate_per_s: float, slope: float, boltzmann: float
+) -> GroundCoupling:
+    """Add a decay of one kept level to the ground state, and its inverse, to a coupling.
+
+    Parameters
+    ----------
+    coupling : GroundCoupling
+        What there is.
+    kept : int
+        Position of the decaying level.
+    rate_per_s : float, s^-1
+        Its rate.
+    slope : float, dimensionless
+        d ln rate / d ln T_r.
+    boltzmann : float, dimensionless
+        Population of the level in Boltzmann equilibrium with the ground state at T_r.
+    """
+    loss, source = coupling.loss.copy(), coupling.source.copy()
+    slope_temperature = coupling.slope_temperature.copy()
+    loss[kept, kept] += rate_per_s
+    source[kept] += rate_per_s * boltzmann
+    slope_temperature[kept, kept] += rate_per_s * slope
+    return replace(coupling, loss=loss, source=source, slope_temperature=slope_temperature)

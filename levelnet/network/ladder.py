@@ -8,7 +8,7 @@ from functools import lru_cache
 import numpy as np
 
 from .. import constants as const
-from ..arrays import FloatArray, IntArray
+from ..arrays import BoolArray, FloatArray, IntArray
 from ..atomic.bound_bound import DipoleBlocks, dipole_blocks
 from ..atomic.bound_free import BoundFree, bound_free
 from ..atomic.levels import LevelSet, hydrogenic_levels, ionization_scale_ev
@@ -40,7 +40,7 @@ class Interior:
     n: IntArray
     l: IntArray
     position: IntArray
-    idle: np.ndarray
+    idle: BoolArray
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -115,7 +115,9 @@ def hydrogen_ladder(n_max: int, energies: str, kept: tuple[tuple[int, int], ...]
     lines, continuum = _atomic_data(n_max, 1)
     n, l = (np.array(x) for x in zip(*sorted(kept), strict=True))
     if np.any((n < 2) | (n > n_max) | (l < 0) | (l >= n)):
-        raise InputError(f"kept levels {kept}: allowed are (n, l) with 2 <= n <= {n_max}, 0 <= l < n")
+        raise InputError(
+            f"kept levels {kept}: allowed are (n, l) with 2 <= n <= {n_max}, 0 <= l < n"
+        )
     position = level_position(n, l)
     plain = ionization_scale_ev(1) / levels.n.astype(float) ** 2
     return Ladder(
@@ -148,7 +150,10 @@ def _interior(n_max: int, kept: set[tuple[int, int]]) -> Interior:
     sizes = [n_max + 1 - n for n in first]
     l_all = np.repeat(np.arange(n_max), sizes)
     n_all = np.concatenate([np.arange(n, n_max + 1) for n in first])
-    idle = np.array([(n, l) in kept for n, l in zip(n_all, l_all, strict=True)], dtype=bool)
+    idle = np.array(
+        [level in kept for level in zip(n_all.tolist(), l_all.tolist(), strict=True)],
+        dtype=np.bool_,
+    )
     return Interior(
         np.array(first),
         BlockShape.of(sizes),

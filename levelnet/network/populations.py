@@ -59,9 +59,7 @@ def populations(
     with np.errstate(divide="ignore"):
         log_source = np.log(alpha * pairs)
     for log_x, lines in zip(log_kept, factored.kept_lines, strict=True):
-        log_source[lines.position] = np.logaddexp(
-            log_source[lines.position], log_x + lines.log_out
-        )
+        log_source[lines.position] = np.logaddexp(log_source[lines.position], log_x + lines.log_out)
     log_population = np.full(len(ladder.levels), -np.inf)
     error = 0.0
     if inside.shape.n_unknowns:

@@ -1,13 +1,14 @@
-"""The kept levels in the quasi-steady state: their populations, the flow to the ground state, slopes.
+"""The kept levels in the quasi-steady state: populations, flow to the ground state, slopes.
 
-With x_B the Boltzmann populations over the ground state at T_r and x = x_B + d, the balance of the kept
-levels reads
+With x_B the Boltzmann populations over the ground state at T_r and x = x_B + d, the balance of the
+kept levels reads
 
     (M + K) d = r + (s - K x_B),   M = diag(B_i + sum_j R_ij) - R^T,
-    r_i = A_i n_H x_e x_p - B_i x_B,i = A_i n_H x_e x_p [1 - exp(ln B_i x_B,i - ln A_i n_H x_e x_p)],
+    r_i = a_i - B_i x_B,i = a_i [1 - exp(ln B_i x_B,i - ln a_i)],   a_i = A_i n_H x_e x_p,
 
-since exchange cancels exactly in Boltzmann equilibrium. The net flow to the ground state, K d - (s - K x_B),
-is then a product of a rate and a departure, never the difference of two large flows.
+since exchange cancels exactly in Boltzmann equilibrium. The net flow to the ground state,
+K d - (s - K x_B), is then a product of a rate and a departure, never the difference of two large
+flows.
 """
 
 from __future__ import annotations
@@ -72,7 +73,7 @@ class KeptSolution:
 
     @property
     def log_population(self) -> FloatArray:
-        """Natural log of the populations per hydrogen nucleus; SolveError if one is not positive."""
+        """Natural log of the populations per hydrogen nucleus; SolveError if not positive."""
         # Where x_B leaves the doubles, d is the population.
         population = np.exp(self.log_boltzmann) + self.departure
         if np.any(population <= 0.0):
@@ -87,9 +88,11 @@ class KeptSolution:
 def log_boltzmann_populations(
     kept: KeptLevels, radiation_temperature_k: float, ground_fraction: float
 ) -> FloatArray:
-    """ln of the populations in Boltzmann equilibrium with the ground state at T_r."""
+    """Natural log of the populations in Boltzmann equilibrium with the ground state at T_r."""
     kt = const.BOLTZMANN_EV_K * radiation_temperature_k
-    return np.log(ground_fraction * kept.statistical_weight / 2.0) - kept.energy_ev / kt
+    weight = ground_fraction * kept.statistical_weight / 2.0
+    log_population: FloatArray = np.log(weight) - kept.energy_ev / kt
+    return log_population
 
 
 def solve_kept(
@@ -148,22 +151,29 @@ def flow_slopes(
     """Derivatives of the net flow, by one transposed solve.
 
     With the fates y = (M + K)^-T K^T 1 (the chance that an atom put into a kept level ends in the
-    ground state), dF = (1 - y).(dK d) + y.(dr - dM d). Slopes of `excess_source` are not included: a
-    treatment with a distorted field is stepped with them lagging.
+    ground state) and z = 1 - y = (M + K)^-T B (that it is ionized again first),
+    dF = z.(dK d) + y.(dr - dM d). Both are solved for, so that neither is a difference. Slopes of `excess_source` are not included:
+    a treatment with a distorted field is stepped with them lagging.
     """
     d = solution.departure
-    fate = lapack.dgesv(solution.matrix.T, coupling.loss.sum(axis=0))[2]
+    photo = np.exp(rates.log_photoionization)
+    ends = np.stack([coupling.loss.sum(axis=0), photo], axis=1)
+    fate, ionized_again = lapack.dgesv(solution.matrix.T, ends)[2].T
     kt = const.BOLTZMANN_EV_K * conditions.radiation_temperature_k
     capture, lift = fate * solution.capture, fate * solution.lift
-    photo = np.exp(rates.log_photoionization)
-    by_column = float((1.0 - fate) @ (coupling.slope_column @ d))
-    spread = rates.exchange * rates.exchange_slope * d[:, None] * (fate[:, None] - fate[None, :])
+    by_column = float(ionized_again @ (coupling.slope_column @ d))
+    gain = np.where(
+        np.add.outer(fate, fate) < 1.0,
+        np.subtract.outer(fate, fate),
+        -np.subtract.outer(ionized_again, ionized_again),
+    )
+    spread = rates.exchange * rates.exchange_slope * d[:, None] * gain
     by_radiation = (
         capture @ rates.recombination_slope_radiation
         - lift @ (rates.photoionization_slope + kept.energy_ev / kt)
         - fate @ (photo * rates.photoionization_slope * d)
         - spread.sum()
-        + (1.0 - fate) @ (coupling.slope_temperature @ d)
+        + ionized_again @ (coupling.slope_temperature @ d)
     )
     captured = float(capture.sum())
     return FlowSlopes(

@@ -1,10 +1,10 @@
 """Block LU of a block-tridiagonal M-matrix without symmetry, with the conserving diagonal.
 
-The matrix is A = D - R in row form: R_ij >= 0 is the rate from i to j, D_i = sum_j R_ij + sink_i, so that
-A 1 = sink. Solving A p = r gives fates (the chance to end somewhere), solving A^T x = s populations.
-It serves where the symmetric form fails: rates of both directions that are not in detailed balance at
-one temperature, or weights that leave the doubles. Blocks of 1 - D^-1 R are eliminated as in
-:mod:`levelnet.numerics.block_cholesky`, with v = 1.
+The matrix is A = D - R in row form: R_ij >= 0 is the rate from i to j, D_i = sum_j R_ij + sink_i,
+so that A 1 = sink. Solving A p = r gives fates (the chance to end somewhere), solving A^T x = s
+populations. It serves where the symmetric form fails: rates of both directions that are not in
+detailed balance at one temperature, or weights that leave the doubles. Blocks of 1 - D^-1 R are
+eliminated as in :mod:`levelnet.numerics.block_cholesky`, with v = 1.
 """
 
 from __future__ import annotations
@@ -43,7 +43,7 @@ class BlockLU:
 
     def solve(self, right: FloatArray) -> FloatArray:
         """Solve A p = r; `right` has shape (n_right, n_unknowns)."""
-        p = np.asarray(right, dtype=np.float64) / self.diagonal
+        p: FloatArray = np.asarray(right, dtype=np.float64) / self.diagonal
         for block in range(len(self.shape.size) - 1, 0, -1):
             inner = self._inverse(block, self.shape.part(p, block), 0)
             self.shape.part(p, block - 1)[...] += inner @ self.upward[block - 1].T
@@ -65,7 +65,8 @@ class BlockLU:
             own = self.shape.part(x, block)
             own += self.shape.part(x, block - 1) @ self.upward[block - 1]
             self._inverse(block, own, 1, keep=True)
-        return x / self.diagonal
+        solution: FloatArray = x / self.diagonal
+        return solution
 
     def _inverse(
         self, block: int, right: FloatArray, transposed: int, keep: bool = False
@@ -73,7 +74,7 @@ class BlockLU:
         """S_block^-1 (or its transpose) on each row of `right`; in place where `keep`."""
         if not right.size:
             return right
-        solution = lapack.dgetrs(*self.factors[block], right.T, trans=transposed)[0].T
+        solution: FloatArray = lapack.dgetrs(*self.factors[block], right.T, trans=transposed)[0].T
         if keep:
             right[...] = solution
         return solution
@@ -114,12 +115,15 @@ def factor_general(
         shape.part(to_above, block)[...] = upward[block].sum(axis=1)
         shape.part(to_below, block + 1)[...] = downward[block].sum(axis=1)
     diagonal = to_above + to_below + sink
-    if np.any(diagonal <= 0.0):
-        raise SolveError(Outcome.SINGULAR.value)
+    leaks = np.isfinite(sink).all() and (sink > 0.0).any()
+    if len(sink) and not (leaks and np.all(diagonal > 0.0)):
+        raise SolveError(f"{Outcome.SINGULAR.value} (block l = 0)")
     up = [u / shape.part(diagonal, k)[:, None] for k, u in enumerate(upward)]
     down = [d / shape.part(diagonal, k + 1)[:, None] for k, d in enumerate(downward)]
     excess, below = sink / diagonal, to_below / diagonal
-    factors: list[tuple[FloatArray, IntArray]] = [(np.zeros((0, 0)), np.zeros(0, np.int64))] * n_blocks
+    factors: list[tuple[FloatArray, IntArray]] = [
+        (np.zeros((0, 0)), np.zeros(0, np.int64))
+    ] * n_blocks
     for block in range(n_blocks - 1, -1, -1):
         side = int(shape.size[block])
         if not side:

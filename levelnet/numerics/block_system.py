@@ -3,10 +3,14 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import TypeVar
 
 import numpy as np
+from numpy.typing import NDArray
 
 from ..arrays import FloatArray, IntArray
+
+Scalar = TypeVar("Scalar", bound=np.generic)
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -20,7 +24,8 @@ class BlockShape:
     start : ndarray of int, shape (n_blocks,)
         Where each block begins in a vector.
     coupling_start : ndarray of int, shape (n_blocks - 1,)
-        Where the coupling of block l (rows) to block l + 1 (columns), C-ordered, begins in its buffer.
+        Where the coupling of block l (rows) to block l + 1 (columns), C-ordered, begins in its
+        buffer.
     factor_start : ndarray of int, shape (n_blocks,)
         Where the square of block l begins in the buffer of factors.
     """
@@ -67,7 +72,7 @@ class BlockShape:
         side, begin = self.size[block], self.factor_start[block]
         return buffer[begin : begin + side * side].reshape(side, side).T
 
-    def part(self, vector: FloatArray, block: int) -> FloatArray:
+    def part(self, vector: NDArray[Scalar], block: int) -> NDArray[Scalar]:
         """View of the unknowns of `block` along the last axis."""
         begin = self.start[block]
         return vector[..., begin : begin + self.size[block]]

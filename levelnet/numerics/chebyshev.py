@@ -44,7 +44,7 @@ class ChebyshevSeries:
         """Values and derivatives at `x`, each of shape (n_functions,); RangeError outside."""
         middle, half = 0.5 * (self.low + self.high), 0.5 * (self.high - self.low)
         t = (x - middle) / half
-        if abs(t) > 1.0 + 1e-12:
+        if not abs(t) <= 1.0 + 1e-12:  # so that NaN is outside too
             raise RangeError(f"{x:g}: outside the interpolated range {self.low:g} to {self.high:g}")
         t = min(1.0, max(-1.0, t))
         order = np.arange(len(self.coefficients))

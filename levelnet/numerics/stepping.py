@@ -4,8 +4,9 @@ L-stable and stiffly accurate; one Jacobian and one factorization a step, no New
 
 References
 ----------
-Hairer & Wanner 1996, Solving Ordinary Differential Equations II, 2nd ed., sec. IV.7 and IV.10 (method
-RODAS; coefficients from memory, held by the test of the observed order and of the order conditions).
+Hairer & Wanner 1996, Solving Ordinary Differential Equations II, 2nd ed., sec. IV.7 and IV.10
+(method RODAS; coefficients from memory, held by the test of the observed order and of the order
+conditions).
 """
 
 from __future__ import annotations
@@ -36,7 +37,13 @@ _C = (
     (-2.430093356833875, -0.2063599157091915),
     (-0.1073529058151375, -9.594562251023355, -20.47028614809616),
     (7.496443313967647, -10.24680431464352, -33.99990352819905, 11.70890893206160),
-    (8.083246795921522, -7.981132988064893, -31.52159432874371, 16.31930543123136, -6.058818238834054),
+    (
+        8.083246795921522,
+        -7.981132988064893,
+        -31.52159432874371,
+        16.31930543123136,
+        -6.058818238834054,
+    ),
 )
 _NODE = (0.0, 0.386, 0.21, 0.63, 1.0, 1.0)
 _TIME = (0.25, -0.1043, 0.1035, -0.03620000000000023, 0.0, 0.0)
@@ -106,7 +113,7 @@ def rosenbrock_step(
     return point + stages[-1], stages[-1]
 
 
-def integrate(
+def integrate(  # noqa: PLR0913 (each is a choice of the caller)
     rate: Rate,
     jacobian: Jacobian,
     start: float,
@@ -118,7 +125,7 @@ def integrate(
     max_steps: int,
     on_step: Callable[[float], None] | None = None,
 ) -> Trajectory:
-    """Integrate to every output in turn, keeping the local error of each variable below `tolerance`.
+    """Integrate to every output in turn, the local error of each variable below `tolerance`.
 
     Parameters
     ----------

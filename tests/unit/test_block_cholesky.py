@@ -1,0 +1,226 @@
+"""Block Cholesky against general dense and sparse solvers and 60-digit arithmetic."""
+
+from __future__ import annotations
+
+import numpy as np
+import pytest
+from hypothesis import given
+from hypothesis import strategies as st
+from scipy import sparse
+from scipy.sparse.linalg import splu
+
+from levelnet.errors import SolveError
+from levelnet.numerics import block_cholesky
+from levelnet.numerics.block_cholesky import SMALL_BLOCK, factor_symmetric
+from levelnet.numerics.block_system import BlockShape
+from tests.random_networks import Symmetric, symmetric_network
+from tests.tolerances import CONSERVATION, ELIMINATION, ROUND_OFF
+
+SIZES = [
+    [1],
+    [7],
+    [1, 1],
+    [1] * 9,
+    [5, 4, 3, 2, 1],
+    [3, 5, 1, 4],
+    [6, 0, 5],
+    [0, 4, 3],
+    [4, 3, 0],
+    [0, 0, 2, 0],
+    [SMALL_BLOCK, SMALL_BLOCK - 1, 7],
+    [SMALL_BLOCK + 1, 3, 1, 0, 9, 20],
+    [2, SMALL_BLOCK + 20, SMALL_BLOCK + 19],
+]
+shapes = st.lists(st.integers(0, 6), min_size=1, max_size=7).filter(lambda sizes: sum(sizes) > 0)
+
+
+def general_sparse(matrix: np.ndarray, right: np.ndarray) -> np.ndarray:
+    """Solve each row of `right` by SuperLU (scipy)."""
+    return splu(sparse.csc_array(matrix)).solve(right.T).T
+
+
+def relative_error(computed: np.ndarray, expected: np.ndarray) -> float:
+    return float(np.max(np.abs(computed / expected - 1.0)))
+
+
+@pytest.mark.parametrize("sizes", SIZES, ids=str)
+def test_against_dense_and_sparse_solvers(sizes: list[int]) -> None:
+    rng = np.random.default_rng(11)
+    network = symmetric_network(sizes, rng)
+    right = rng.uniform(0.0, 1.0, (3, sum(sizes)))
+    solution = network.factor().solve(right)
+    # A leak of a tenth of the flow: condition below 100, so the references are good to ROUND_OFF x 100.
+    for expected in (
+        np.linalg.solve(network.dense(), right.T).T,
+        general_sparse(network.dense(), right),
+    ):
+        assert relative_error(solution, expected) < 100 * ROUND_OFF
+
+
+@given(shapes, st.integers(0, 2**32), st.floats(0.0, 6.0), st.floats(-8.0, 0.0))
+def test_any_network_has_a_small_residual(
+    sizes: list[int], seed: int, decades: float, log_leak: float
+) -> None:
+    rng = np.random.default_rng(seed)
+    network = symmetric_network(sizes, rng, decades, 10.0**log_leak)
+    right = rng.uniform(0.0, 1.0, (1, sum(sizes)))
+    solution = network.factor().solve(right)
+    assert np.all(solution > 0.0)
+    residual = solution[0] - network.off_diagonal() @ solution[0] - right[0]
+    assert np.max(np.abs(residual)) < 100 * ROUND_OFF * np.max(solution)
+
+
+@given(shapes, st.integers(0, 2**32))
+def test_adjoint_identity(sizes: list[int], seed: int) -> None:
+    # H is symmetric: <w, H^-1 v> = <H^-1 w, v>.
+    rng = np.random.default_rng(seed)
+    factored = symmetric_network(sizes, rng, 4.0, 1e-3).factor()
+    v, w = rng.uniform(0.0, 1.0, (2, sum(sizes)))
+    forward, backward = factored.solve(np.array([v, w]))
+    assert w @ forward == pytest.approx(backward @ v, rel=100 * ROUND_OFF)
+
+
+@pytest.mark.parametrize("decades", [1.0, 6.0, 14.0])
+@pytest.mark.parametrize("sizes", [[9, 8, 7, 5], [SMALL_BLOCK + 2, SMALL_BLOCK, 3]], ids=str)
+def test_what_enters_leaves(sizes: list[int], decades: float) -> None:
+    # Grassmann, Taksar & Heyman 1985, Oper. Res. 33, 1107: v.r = v.(H x) = c.x.
+    rng = np.random.default_rng(3)
+    for leak in (1e-1, 1e-3):
+        network = symmetric_network(sizes, rng, decades, leak)
+        right = 10.0 ** rng.uniform(-decades, 0.0, sum(sizes))
+        solution = network.factor().solve(right[None])[0]
+        inflow, outflow = network.weight @ right, network.excess @ solution
+        assert outflow == pytest.approx(inflow, rel=CONSERVATION)
+
+
+@pytest.mark.parametrize("sizes", [[1] * 12, [1, 3, 1, 2], [1, 6, 5, 4]], ids=str)
+@pytest.mark.parametrize("decades", [2.0, 14.0])
+@pytest.mark.parametrize("leak", [1e-6, 1e-14])
+def test_nearly_singular_networks_keep_every_digit(
+    sizes: list[int], decades: float, leak: float
+) -> None:
+    # One exit, at the last unknown or the first; the condition is about 1/leak, up to 1e16 and more.
+    rng = np.random.default_rng(5)
+    for leaking in (0, sum(sizes) - 1):
+        network = symmetric_network(sizes, rng, decades, leak, leaking)
+        right = rng.uniform(0.0, 1.0, sum(sizes))
+        solution = network.factor().solve(right[None])[0]
+        exact = network.exact_solution(right)
+        assert relative_error(solution, exact) < 10 * ROUND_OFF
+
+
+def test_a_plain_factorization_loses_those_digits() -> None:
+    # Why the diagonal is formed as a sum: the same network, entered as a matrix into LAPACK.
+    rng = np.random.default_rng(5)
+    network = symmetric_network([1, 6, 5, 4], rng, 2.0, 1e-10, 15)
+    right = rng.uniform(0.0, 1.0, 16)
+    exact = network.exact_solution(right)
+    plain = np.linalg.solve(network.dense(), right)
+    assert relative_error(plain, exact) > 1e-7
+    assert relative_error(network.factor().solve(right[None])[0], exact) < 10 * ROUND_OFF
+
+
+def test_a_trap_inside_the_first_block_costs_its_condition_only() -> None:
+    # Within one block the pivots are differences; digits go as rounding over leak, as in any solver.
+    rng = np.random.default_rng(8)
+    for leak in (1e-4, 1e-7):
+        network = symmetric_network([6, 5, 4], rng, 2.0, leak, 14)
+        right = rng.uniform(0.0, 1.0, 15)
+        solution = network.factor().solve(right[None])[0]
+        assert relative_error(solution, network.exact_solution(right)) < ROUND_OFF / leak
+
+
+@pytest.mark.parametrize("sizes", [[5, 4, 3], [12, 0, 7], [SMALL_BLOCK, 30, 1]], ids=str)
+def test_compiled_and_library_paths_agree(
+    sizes: list[int], monkeypatch: pytest.MonkeyPatch
+) -> None:
+    rng = np.random.default_rng(2)
+    network = symmetric_network(sizes, rng, 3.0, 1e-2)
+    right = rng.uniform(0.0, 1.0, (2, sum(sizes)))
+    compiled = network.factor().solve(right)
+    monkeypatch.setattr(block_cholesky, "SMALL_BLOCK", -1)
+    np.testing.assert_allclose(network.factor().solve(right), compiled, rtol=100 * ROUND_OFF)
+
+
+def test_large_blocks_against_the_sparse_solver() -> None:
+    rng = np.random.default_rng(4)
+    network = symmetric_network([90, 89, 60, 30, 1], rng, 6.0, 1e-4)
+    right = rng.uniform(0.0, 1.0, (2, 270))
+    expected = general_sparse(network.dense(), right)
+    assert relative_error(network.factor().solve(right), expected) < ELIMINATION
+
+
+@pytest.mark.parametrize("large", [False, True])
+@pytest.mark.parametrize("sizes", [[1, 1, 1], [1, 4, 3], [6, 1], [4, 3], [5, 6, 5]], ids=str)
+def test_a_network_without_exit_is_singular(
+    sizes: list[int], large: bool, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    if large:
+        monkeypatch.setattr(block_cholesky, "SMALL_BLOCK", -1)
+    for seed in range(10):
+        network = symmetric_network(sizes, np.random.default_rng(seed), 2.0, 0.0)
+        with pytest.raises(SolveError, match=r"rate matrix is singular.*block l = 0"):
+            network.factor()
+
+
+def test_one_unknown_without_exit_is_singular() -> None:
+    alone = Symmetric(BlockShape.of([1]), np.zeros(0), np.ones(1), np.zeros(1), np.zeros(1))
+    with pytest.raises(SolveError, match="block l = 0"):
+        alone.factor()
+
+
+def test_an_excess_that_is_no_number_is_an_error() -> None:
+    for sizes in ([3, 2], [SMALL_BLOCK + 1, 2]):
+        network = symmetric_network(sizes, np.random.default_rng(0))
+        network.excess[-1] = np.nan
+        with pytest.raises(SolveError):
+            network.factor()
+
+
+def test_a_buffer_in_use_leaves_nothing_of_its_contents() -> None:
+    for sizes in ([4, 3, 2], [SMALL_BLOCK + 5, 0, 3]):
+        network = symmetric_network(sizes, np.random.default_rng(1))
+        right = np.ones((1, sum(sizes)))
+        fresh = network.factor().solve(right)
+        buffer = np.full(network.shape.n_factors, np.nan)
+        reused = factor_symmetric(
+            network.shape,
+            network.coupling.copy(),
+            network.weight,
+            network.outflow,
+            network.excess,
+            buffer,
+        )
+        assert np.array_equal(reused.solve(right), fresh)
+        assert np.shares_memory(reused.factor, buffer)
+
+
+def test_inputs_are_left_alone() -> None:
+    network = symmetric_network([4, 3], np.random.default_rng(1))
+    copies = [part.copy() for part in network[2:]]
+    right = np.ones((2, 7))
+    network.factor().solve(right)
+    for part, copy in zip(network[2:], copies, strict=True):
+        assert np.array_equal(part, copy)
+    assert np.all(right == 1.0)
+
+
+def test_no_unknowns_and_no_right_sides() -> None:
+    empty = BlockShape.of([0, 0])
+    nothing = np.zeros(0)
+    factored = Symmetric(empty, nothing, nothing, nothing, nothing).factor()
+    assert factored.solve(np.zeros((2, 0))).shape == (2, 0)
+    for sizes in ([3, 2], [SMALL_BLOCK + 1, 2]):
+        network = symmetric_network(sizes, np.random.default_rng(0))
+        assert network.factor().solve(np.zeros((0, sum(sizes)))).shape == (0, sum(sizes))
+
+
+def test_layout_of_blocks() -> None:
+    shape = BlockShape.of([2, 0, 3, 1])
+    assert (shape.n_unknowns, shape.n_couplings, shape.n_factors) == (6, 3, 14)
+    assert shape.start.tolist() == [0, 2, 2, 5]
+    assert shape.coupling_start.tolist() == [0, 0, 0]
+    assert shape.factor_start.tolist() == [0, 4, 4, 13]
+    assert shape.coupling(np.arange(3.0), 2).tolist() == [[0.0], [1.0], [2.0]]
+    assert shape.factor(np.arange(14.0), 0).tolist() == [[0.0, 2.0], [1.0, 3.0]]
+    assert shape.part(np.arange(12.0).reshape(2, 6), 3).tolist() == [[5.0], [11.0]]

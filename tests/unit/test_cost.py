@@ -1,0 +1,112 @@
+"""Estimates of memory and time, and the refusal of what cannot fit."""
+
+from __future__ import annotations
+
+import builtins
+import io
+import os
+from typing import Any
+
+import pytest
+
+from levelnet.errors import InputError
+from levelnet.history import cost
+from levelnet.history.cost import check_memory, estimate, table_tolerance
+from tests.small_runs import small_setup
+
+
+def test_estimates_grow_with_the_atom() -> None:
+    costs = [estimate(small_setup(n)) for n in (10, 100, 300, 1000)]
+    memory = [c.memory_bytes for c in costs]
+    seconds = [c.seconds for c in costs]
+    assert memory == sorted(memory)
+    assert seconds == sorted(seconds)
+    # n^4 of the factorization: at least n^3.5 from 300 to 1000.
+    assert seconds[3] / seconds[2] > (1000 / 300) ** 3.5
+    # Strengths of every line alone: n^3/3 numbers.
+    assert memory[3] > 8e9 / 3.0
+
+
+def test_populations_are_counted() -> None:
+    few, many = (estimate(small_setup(100, count=n)).memory_bytes for n in (2, 10002))
+    # Population, departure: at least two arrays of 5050 levels.
+    assert many - few > 10_000 * 5050 * 2 * 8
+    listed = small_setup(
+        100, grid={"redshift_start": 1800.0, "redshift_end": 20.0, "redshifts": (1000.0, 900.0)}
+    )
+    assert estimate(listed).memory_bytes == few
+
+
+def test_direct_mode_costs_more_time() -> None:
+    table, direct = (
+        estimate(small_setup(50, accuracy={"interpolate": choice})) for choice in (True, False)
+    )
+    assert direct.seconds > 10.0 * table.seconds
+    assert direct.memory_bytes == table.memory_bytes
+
+
+def test_table_is_a_hundred_times_better_than_the_history() -> None:
+    assert table_tolerance(small_setup(8, accuracy={"relative": 1e-5})) == pytest.approx(1e-7)
+    assert table_tolerance(small_setup(8, accuracy={"relative": 1e-9})) == pytest.approx(1e-11)
+
+
+def test_a_run_that_fits() -> None:
+    setup = small_setup(8)
+    assert check_memory(setup) == estimate(setup)
+
+
+def test_no_memory_is_refused_with_the_figure(monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setattr(cost, "available_memory_bytes", lambda: 2.5e8)
+    with pytest.raises(InputError, match=r"n_max = 300: about \d+ MB .* needed, 250 MB available"):
+        check_memory(small_setup(300))
+
+
+def test_an_atom_beyond_the_tested_rates_is_refused(monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setattr(cost, "available_memory_bytes", lambda: 1e15)
+    with pytest.raises(InputError, match=r"n_max = 1001: about .* GB .* highest allowed is 1000"):
+        check_memory(small_setup(1001))
+    assert check_memory(small_setup(1000)).memory_bytes > 1e9
+
+
+def test_ten_thousand_shells_are_refused_here_and_now() -> None:
+    with pytest.raises(InputError, match=r"n_max = 10000: about [\d.e+]+ TB of memory needed"):
+        check_memory(small_setup(10_000))
+
+
+def fake_files(monkeypatch: pytest.MonkeyPatch, contents: dict[str, str]) -> None:
+    def fake_open(path: Any, *args: Any, **kwargs: Any) -> Any:
+        if str(path) in contents:
+            return io.StringIO(contents[str(path)])
+        if str(path).startswith(("/proc/meminfo", "/sys/fs/cgroup")):
+            raise FileNotFoundError(path)
+        return builtins.open(path, *args, **kwargs)
+
+    monkeypatch.setattr(cost, "open", fake_open, raising=False)
+
+
+def test_memory_is_the_least_of_what_the_system_says(monkeypatch: pytest.MonkeyPatch) -> None:
+    meminfo = "MemTotal: 9000000 kB\nMemAvailable: 4000000 kB\n"
+    fake_files(monkeypatch, {"/proc/meminfo": meminfo, "/sys/fs/cgroup/memory.max": "max\n"})
+    assert cost.available_memory_bytes() == 4000000 * 1024
+    limit = {"/proc/meminfo": meminfo, "/sys/fs/cgroup/memory.max": "1000000000\n"}
+    fake_files(monkeypatch, limit)
+    assert cost.available_memory_bytes() <= 1e9
+
+
+@pytest.mark.parametrize("meminfo", [{}, {"/proc/meminfo": "MemTotal: 9000000 kB\n"}])
+def test_without_figures_of_the_kernel_pages_are_counted(
+    monkeypatch: pytest.MonkeyPatch, meminfo: dict[str, str]
+) -> None:
+    fake_files(monkeypatch, meminfo)
+    monkeypatch.setattr(
+        os, "sysconf", {"SC_AVPHYS_PAGES": 1000, "SC_PAGE_SIZE": 4096}.__getitem__
+    )
+    assert cost.available_memory_bytes() == 4096000
+
+
+@pytest.mark.parametrize(
+    ("size", "text"),
+    [(12.0, "12 bytes"), (1.5e3, "1.5 kB"), (2e6, "2 MB"), (3.25e9, "3.25 GB"), (4e15, "4e+03 TB")],
+)
+def test_sizes_in_words(size: float, text: str) -> None:
+    assert cost._readable(size) == text
