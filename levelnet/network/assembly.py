@@ -284,11 +284,11 @@ def _half_angle_tables(ladder: Ladder, kt_ev: float) -> tuple[FloatArray, FloatA
 
 
 def _factor_cold(ladder: Ladder, temperature_k: float, sink: FloatArray) -> BlockLU:
-    upward, downward = _rate_blocks(ladder, temperature_k)
+    upward, downward = rate_blocks(ladder, temperature_k)
     return factor_general(ladder.interior.shape, upward, downward, sink)
 
 
-def _rate_blocks(ladder: Ladder, temperature_k: float) -> tuple[list[FloatArray], list[FloatArray]]:
+def rate_blocks(ladder: Ladder, temperature_k: float) -> tuple[list[FloatArray], list[FloatArray]]:
     """Rates between the interior blocks l and l + 1, both directions."""
     inside = ladder.interior
     above, below = [], []

@@ -227,12 +227,16 @@ def test_against_a_general_integrator() -> None:
         return slope, np.array([-change * y[0] * y[1], 1e4 * y[0] * change])
 
     start, outputs = np.array([1.0, 0.0]), (0.5, 1.0, 3.0)
-    run = integrate(
-        rate, jacobian, 0.0, start, outputs, 1e-9, first_step=1e-6, max_steps=100_000
-    )
+    run = integrate(rate, jacobian, 0.0, start, outputs, 1e-9, first_step=1e-6, max_steps=100_000)
     assert run.outcome.ok
     reference = solve_ivp(
-        rate, (0.0, 3.0), start, "Radau", outputs, rtol=1e-11, atol=1e-13,
+        rate,
+        (0.0, 3.0),
+        start,
+        "Radau",
+        outputs,
+        rtol=1e-11,
+        atol=1e-13,
         jac=lambda t, y: jacobian(t, y)[0],
     )
     found = run.state[np.isin(run.time, outputs)]

@@ -71,9 +71,7 @@ def both_directions(ladder: Ladder, kelvin: float) -> np.ndarray:
 
 @pytest.mark.parametrize("kept", KEPT.values(), ids=KEPT)
 @pytest.mark.parametrize("energies", ["measured", "nonrelativistic"])
-def test_against_its_own_source(
-    kept: Any, energies: str, monkeypatch: pytest.MonkeyPatch
-) -> None:
+def test_against_its_own_source(kept: Any, energies: str, monkeypatch: pytest.MonkeyPatch) -> None:
     ladder = hydrogen_ladder(7, energies, kept)
     ours = assembled(ladder, 2500.0, symmetric_blocks)
     plain: Any = symmetric_blocks
@@ -91,10 +89,10 @@ def test_against_its_own_source(
 def test_against_line_by_line_rates(kept: Any, energies: str, kelvin: float) -> None:
     # Einstein 1917, Phys. Z. 18, 121, with the occupation of the actual line energy. The kernel
     # expands in the fine structure d: (d/kT)^3/96 for a line far above kT, (1e-5)^2 of one below;
-    # d is up to 4e-5 eV (the Lamb shift and fine structure of n = 2).
+    # d is up to 6e-5 eV (the Lamb shift and fine structure of n = 2).
     tolerance = 1e-12
     if energies == "measured":
-        tolerance = 1e-9 + (4.5e-5 * KELVIN_PER_EV / kelvin) ** 3 / 96
+        tolerance = 1e-9 + (6e-5 * KELVIN_PER_EV / kelvin) ** 3 / 96
     ladder = hydrogen_ladder(7, energies, kept)
     inside, found = ladder.interior, assembled(ladder, kelvin, symmetric_blocks)
     rates = both_directions(ladder, kelvin)

@@ -15,7 +15,17 @@ from levelnet.numerics.block_system import BlockShape
 from tests.random_networks import general_network, symmetric_network
 from tests.tolerances import CONSERVATION, ELIMINATION, ROUND_OFF
 
-SIZES = [[1], [7], [1] * 9, [5, 4, 3, 2, 1], [3, 5, 1, 4], [6, 0, 5], [0, 4, 3], [45, 44, 7], [4, 0]]
+SIZES = [
+    [1],
+    [7],
+    [1] * 9,
+    [5, 4, 3, 2, 1],
+    [3, 5, 1, 4],
+    [6, 0, 5],
+    [0, 4, 3],
+    [45, 44, 7],
+    [4, 0],
+]
 shapes = st.lists(st.integers(0, 6), min_size=1, max_size=7).filter(lambda sizes: sum(sizes) > 0)
 
 

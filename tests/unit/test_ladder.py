@@ -101,10 +101,7 @@ def test_lines_against_the_rates_of_the_atom() -> None:
         for l in range(n):
             found = partners(ladder, n, l)
             expected = {
-                (m, k)
-                for m in range(2, 8)
-                for k in (l - 1, l + 1)
-                if m != n and 0 <= k < m
+                (m, k) for m in range(2, 8) for k in (l - 1, l + 1) if m != n and 0 <= k < m
             }
             assert set(found) == expected
             for (m, k), strength in found.items():
