@@ -21,9 +21,9 @@ from levelnet.atomic.bound_bound import dipole_blocks, einstein_a
 from levelnet.atomic.levels import reduced_mass_ratio
 
 
-def gordon_einstein_a(n: int, l: int, n_lower: int, l_lower: int) -> float:
+def gordon_einstein_a(n: int, l: int, n_lower: int, l_lower: int, digits: int = 200) -> float:
     """A of hydrogen from the closed form, in s^-1."""
-    mpmath.mp.dps = 200
+    mpmath.mp.dps = digits
     mp, top = mpmath.mpf, max(l, l_lower)
     a, b = (n, n_lower) if l > l_lower else (n_lower, n)  # the state with the higher l first
     x = -4 * mp(a) * b / mp(a - b) ** 2

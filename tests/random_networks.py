@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 from typing import Any, NamedTuple
 
 import mpmath
@@ -66,7 +67,7 @@ def symmetric_network(
     leak: float = 0.1,
     leaking: int | None = None,
 ) -> Symmetric:
-    """Conductances and weights over `decades`; leak relative to the flow, of all or of one unknown."""
+    """Conductances and weights over `decades`; leak, relative to the flow, of all or of one."""
     shape = BlockShape.of(sizes)
     n = shape.n_unknowns
     conductance = 10.0 ** rng.uniform(-decades, 0.0, shape.n_couplings)
@@ -134,9 +135,9 @@ def general_network(
     leak: float = 0.1,
     leaking: int | None = None,
 ) -> General:
-    """Rates over `decades`, no symmetry; sinks relative to the outflow, of all or of one unknown."""
+    """Rates over `decades`, no symmetry; sinks, relative to the outflow, of all or of one."""
     shape = BlockShape.of(sizes)
-    pairs = list(zip(sizes[:-1], sizes[1:], strict=True))
+    pairs = list(itertools.pairwise(sizes))
     upward = [10.0 ** rng.uniform(-decades, 0.0, pair) for pair in pairs]
     downward = [10.0 ** rng.uniform(-decades, 0.0, pair[::-1]) for pair in pairs]
     bare = General(shape, upward, downward, np.zeros(shape.n_unknowns))

@@ -20,7 +20,8 @@ STIFF, MILD = 1e6, 1e2
 def tableau() -> tuple[Array, Array, Array, Array]:
     """Turn the coefficients of the code into alpha, Gamma, b and b of the embedded method.
 
-    Hairer & Wanner 1996, Solving Ordinary Differential Equations II, sec. IV.7: stages u = Gamma k, so
+    Hairer & Wanner 1996, Solving Ordinary Differential Equations II, sec. IV.7: stages are
+    u = Gamma k, so
     a = alpha Gamma^-1, c = 1/gamma - Gamma^-1, m = b Gamma^-1.
     """
     a, c = np.zeros((6, 6)), np.zeros((6, 6))
@@ -66,8 +67,8 @@ def test_order_conditions() -> None:
 
 
 def test_times_of_the_stages() -> None:
-    # For an equation that names its time: nodes are row sums of alpha, and the coefficients of df/dt
-    # row sums of Gamma (Hairer & Wanner IV.7).
+    # For an equation that names its time: nodes are row sums of alpha, and the coefficients of
+    # df/dt row sums of Gamma (Hairer & Wanner IV.7).
     alpha, gamma, _, _ = tableau()
     np.testing.assert_allclose(alpha.sum(axis=1), stepping._NODE, atol=1e-13)
     np.testing.assert_allclose(gamma.sum(axis=1), stepping._TIME, atol=1e-13)
@@ -90,7 +91,8 @@ def growth(z: complex) -> complex:
 
 
 def test_l_stable() -> None:
-    # All poles at 1/gamma > 0, so |R| <= 1 on the imaginary axis means A-stable; R(inf) = 0 besides.
+    # All poles at 1/gamma > 0, so |R| <= 1 on the imaginary axis means A-stable; R(inf) = 0
+    # besides.
     for y in np.logspace(-2, 6, 161).tolist():
         assert abs(growth(1j * y)) <= 1.0 + 1e-12
     for z in (-1e4, -1e8, -1e8 + 1e8j):
@@ -103,8 +105,8 @@ def test_growth_is_the_exponential_to_fourth_order() -> None:
     assert np.polyfit(np.log(steps), np.log(errors), 1)[0] == pytest.approx(5.0, abs=ORDER)
 
 
-# Kaps 1981: y1' = -(k + 2) y1 + k y2^2, y2' = y1 - y2 - y2^2 has y1 = y2^2, y2 = e^-t for any stiffness
-# k. With t = s + s^2/2 it names its time: dy/ds = (1 + s) f(y).
+# Kaps 1981: y1' = -(k + 2) y1 + k y2^2, y2' = y1 - y2 - y2^2 has y1 = y2^2, y2 = e^-t for any
+# stiffness k. With t = s + s^2/2 it names its time: dy/ds = (1 + s) f(y).
 
 
 class Kaps:
@@ -141,8 +143,9 @@ def test_observed_order_on_a_stiff_problem_that_names_its_time() -> None:
     errors = np.abs(np.array(runs) - kaps_exact(1.0))
     order = -np.polyfit(np.log(counts), np.log(errors[:, 1]), 1)[0]
     assert order == pytest.approx(4.0, abs=ORDER)
-    # The fast variable follows the slow one; where h k passes through 1 its own order drops, as that
-    # of every such method (Hairer & Wanner 1996, sec. IV.15), far below the error of the slow one.
+    # The fast variable follows the slow one; where h k passes through 1 its own order drops, as
+    # that of every such method (Hairer & Wanner 1996, sec. IV.15), far below the error of the slow
+    # one.
     assert np.all(errors[:, 0] < 2e-9)
 
 

@@ -1,4 +1,4 @@
-"""Matter and field at one temperature, no expansion: every level is in Saha-Boltzmann equilibrium."""
+"""Matter and field at one temperature, no expansion: every level is in equilibrium."""
 
 from __future__ import annotations
 
@@ -68,14 +68,15 @@ def test_every_level_at_any_temperature(kelvin: float) -> None:
 
 @pytest.mark.parametrize("n_max", [3, 30])
 def test_every_level_by_the_unsymmetric_path(n_max: int, monkeypatch: pytest.MonkeyPatch) -> None:
-    # Forced where the symmetric path serves; colder, populations are apart by more than the doubles.
+    # Forced where the symmetric path serves; colder, populations are apart by more than the
+    # doubles.
     monkeypatch.setattr(assembly, "COLD_K", 1e9)
     for kelvin in (60.0, 300.0, 2500.0, 6000.0):
         assert largest_departure(n_max, "measured", kelvin) < EQUILIBRIUM, kelvin
 
 
 def in_equilibrium(ladder: Ladder, kelvin: float) -> Conditions:
-    """As many electrons and ions as keep 1e-3 of the atoms, all in the ground state, in balance."""
+    """As many electrons and ions as balance 1e-3 of all nuclei in the ground state."""
     log_ground = float(
         log_saha_factor(
             ladder.levels.statistical_weight[0], ladder.levels.ionization_energy_ev[0], kelvin
@@ -108,7 +109,8 @@ def test_kept_levels_and_the_ground_state(kept: Any, mode: str, treatment: Any) 
 
 
 def test_a_rough_table_keeps_equilibrium() -> None:
-    # Interpolation errs by 1e-3 here: the inverse rates follow from the same numbers, so nothing moves.
+    # Interpolation errs by 1e-3 here: the inverse rates follow from the same numbers, so nothing
+    # moves.
     ladder = hydrogen_ladder(8, "measured", LYMAN)
     table = tabulate(ladder, 300.0, 6000.0, 1e-2)
     assert table.interpolation_error > 1e-5

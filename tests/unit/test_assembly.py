@@ -36,7 +36,7 @@ TEMPERATURES = (20.0, 27.3, 27.5, 30.0, 100.0, 300.0, 1000.0, 2500.0, 3000.0, 60
 
 
 def planck_rates(ladder: Ladder, kelvin: float) -> np.ndarray:
-    """Rates i -> j of all excited levels, from A, the Planck law and Einstein 1917, Phys. Z. 18, 121."""
+    """Rates i -> j of all excited levels, from A and Planck (Einstein 1917, Phys. Z. 18, 121)."""
     n, l, energy = ladder.levels.n[1:], ladder.levels.l[1:], ladder.levels.energy_ev[1:]
     rates = np.zeros((len(n), len(n)))
     for i in range(len(n)):

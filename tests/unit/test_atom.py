@@ -18,7 +18,10 @@ def test_kept_levels_are_2s_and_every_open_np(n_max: int, asked: int | str, coun
     setup = small_setup(n_max, lines={"lyman_lines": asked})
     assert open_lyman_lines(setup) == count
     kept = build_ladder(setup).kept
-    assert list(zip(kept.n, kept.l, strict=True)) == [(2, 0), *((n, 1) for n in range(2, count + 2))]
+    assert list(zip(kept.n, kept.l, strict=True)) == [
+        (2, 0),
+        *((n, 1) for n in range(2, count + 2)),
+    ]
 
 
 def test_a_smaller_atom_keeps_what_it_has() -> None:

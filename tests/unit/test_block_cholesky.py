@@ -49,7 +49,8 @@ def test_against_dense_and_sparse_solvers(sizes: list[int]) -> None:
     network = symmetric_network(sizes, rng)
     right = rng.uniform(0.0, 1.0, (3, sum(sizes)))
     solution = network.factor().solve(right)
-    # A leak of a tenth of the flow: condition below 100, so the references are good to ROUND_OFF x 100.
+    # A leak of a tenth of the flow: condition below 100, so the references are good to ROUND_OFF x
+    # 100.
     for expected in (
         np.linalg.solve(network.dense(), right.T).T,
         general_sparse(network.dense(), right),
@@ -99,7 +100,8 @@ def test_what_enters_leaves(sizes: list[int], decades: float) -> None:
 def test_nearly_singular_networks_keep_every_digit(
     sizes: list[int], decades: float, leak: float
 ) -> None:
-    # One exit, at the last unknown or the first; the condition is about 1/leak, up to 1e16 and more.
+    # One exit, at the last unknown or the first; the condition is about 1/leak, up to 1e16 and
+    # more.
     rng = np.random.default_rng(5)
     for leaking in (0, sum(sizes) - 1):
         network = symmetric_network(sizes, rng, decades, leak, leaking)
@@ -121,7 +123,8 @@ def test_a_plain_factorization_loses_those_digits() -> None:
 
 
 def test_a_trap_inside_the_first_block_costs_its_condition_only() -> None:
-    # Within one block the pivots are differences; digits go as rounding over leak, as in any solver.
+    # Within one block the pivots are differences; digits go as rounding over leak, as in any
+    # solver.
     rng = np.random.default_rng(8)
     for leak in (1e-4, 1e-7):
         network = symmetric_network([6, 5, 4], rng, 2.0, leak, 14)

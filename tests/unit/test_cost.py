@@ -98,9 +98,7 @@ def test_without_figures_of_the_kernel_pages_are_counted(
     monkeypatch: pytest.MonkeyPatch, meminfo: dict[str, str]
 ) -> None:
     fake_files(monkeypatch, meminfo)
-    monkeypatch.setattr(
-        os, "sysconf", {"SC_AVPHYS_PAGES": 1000, "SC_PAGE_SIZE": 4096}.__getitem__
-    )
+    monkeypatch.setattr(os, "sysconf", {"SC_AVPHYS_PAGES": 1000, "SC_PAGE_SIZE": 4096}.__getitem__)
     assert cost.available_memory_bytes() == 4096000
 
 

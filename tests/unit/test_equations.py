@@ -65,7 +65,12 @@ def test_jacobian_over_the_whole_history(lines: str, two_photon: str) -> None:
 def test_jacobian_far_from_any_history(lines: str) -> None:
     # Hot and cold matter, mostly neutral and mostly ionized: what a rejected step may ask.
     equations = small_equations(lines, "stimulated")
-    for z, u, v in ((1900.0, -1.0, 0.1), (1300.0, 4.0, -0.2), (700.0, 1.0, 0.05), (40.0, -3.0, -0.3)):
+    for z, u, v in (
+        (1900.0, -1.0, 0.1),
+        (1300.0, 4.0, -0.2),
+        (700.0, 1.0, 0.05),
+        (40.0, -3.0, -0.3),
+    ):
         check_derivatives(equations, -math.log1p(z), np.array([u, v]))
 
 
@@ -126,8 +131,8 @@ def test_slope_of_x_e_is_the_net_flow() -> None:
 
 
 def test_compton_heating_and_adiabatic_cooling() -> None:
-    # dT_m/dln a = -2 T_m + (8 sigma_T a T_r^4/(3 m_e c H)) x_e/(1 + f_He + x_e) (T_r - T_m) (Peebles
-    # 1968, Astrophys. J. 153, 1; from memory), with scipy's constants in SI.
+    # dT_m/dln a = -2 T_m + (8 sigma_T a T_r^4/(3 m_e c H)) x_e/(1 + f_He + x_e) (T_r - T_m)
+    # (Peebles 1968, Astrophys. J. 153, 1; from memory), with scipy's constants in SI.
     equations = small_equations()
     z, y = 60.0, np.array([-8.3, -0.4])
     s, t = -math.log1p(z), 2.7255 * 61.0

@@ -125,7 +125,8 @@ def test_boltzmann_populations() -> None:
 
 
 def test_a_field_that_is_no_blackbody() -> None:
-    # excess_source is what the field lifts beyond the blackbody: it adds to the source, level by level.
+    # excess_source is what the field lifts beyond the blackbody: it adds to the source, level by
+    # level.
     ladder, at = hydrogen_ladder(6, "measured", TWO), STATES["early"]
     rates = live_reduction(ladder).rates(at.radiation_temperature_k, at.matter_temperature_k)
     plain = coupling(ladder, at)

@@ -95,7 +95,8 @@ def partners(ladder: Ladder, n: int, l: int) -> dict[tuple[int, int], float]:
 
 
 def test_lines_against_the_rates_of_the_atom() -> None:
-    # Dipole rule: l +- 1, n' not n; strength A sqrt(g_upper / g_lower). The ground state is no partner.
+    # Dipole rule: l +- 1, n' not n; strength A sqrt(g_upper / g_lower). The ground state is no
+    # partner.
     ladder = hydrogen_ladder(7, "measured", TWO)
     for n in range(2, 8):
         for l in range(n):

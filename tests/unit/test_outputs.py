@@ -157,7 +157,7 @@ def test_line_figures_from_the_formulas() -> None:
     # cross another x = a tau/pi.
     thick = lines.damping_parameter[k, 0] * depth / math.pi
     assert lines.crossing_time_hubble[k, 0] == pytest.approx(2.0 * doppler * thick, rel=1e-9)
-    # Lyman-alpha leaves the range of the Sobolev treatment: a few per cent and more of a Hubble time.
+    # Lyman-alpha leaves the range of the Sobolev treatment: over a tenth of a Hubble time.
     assert lines.crossing_time_hubble[:, 0].max() > 0.1
 
 

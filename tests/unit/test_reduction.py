@@ -68,7 +68,8 @@ def test_rates_against_sparse_lu(kept: Any, kelvin: float) -> None:
 
 @pytest.mark.parametrize("kept", KEPT, ids=str)
 def test_exchange_is_symmetric_in_equilibrium_weights(kept: Any) -> None:
-    # w_i R_ij = w_j R_ji, both directions from independent solves of the sparse matrix, and of ours.
+    # w_i R_ij = w_j R_ji, both directions from independent solves of the sparse matrix, and of
+    # ours.
     ladder = hydrogen_ladder(15, "measured", kept)
     levels = ladder.kept
     for kelvin in (200.0, 1000.0, 6000.0):
@@ -130,7 +131,7 @@ def test_nothing_is_lost_without_radiation(kept: Any) -> None:
 
 
 def cascade(n_max: int, matter: float) -> np.ndarray:
-    """Effective recombination into 2s and 2p without radiation, the tail beyond n_max in proportion."""
+    """Effective recombination into 2s and 2p without radiation; beyond n_max in proportion."""
     ladder = hydrogen_ladder(n_max, "nonrelativistic", TWO)
     n, l = ladder.levels.n[1:], ladder.levels.l[1:]
     alpha = recombination_coefficient(n, l, matter)
@@ -155,8 +156,8 @@ def test_published_case_b() -> None:
 
 
 def test_published_split_between_2s_and_2p() -> None:
-    # Osterbrock & Ferland 2006, Astrophysics of Gaseous Nebulae, table 4.x: effective coefficients at
-    # 1e4 K, low density: 2s 0.838e-13, 2p 1.74e-13 cm^3/s (from memory).
+    # Osterbrock & Ferland 2006, Astrophysics of Gaseous Nebulae, table 4.x: effective coefficients
+    # at 1e4 K, low density: 2s 0.838e-13, 2p 1.74e-13 cm^3/s (from memory).
     to_2s, to_2p = cascade(60, 1e4)
     assert to_2s == pytest.approx(0.838e-13, rel=0.01)
     assert to_2p == pytest.approx(1.74e-13, rel=0.01)
@@ -164,7 +165,8 @@ def test_published_split_between_2s_and_2p() -> None:
 
 @pytest.mark.parametrize("kept", KEPT, ids=str)
 def test_detailed_balance_with_the_continuum(kept: Any) -> None:
-    # Milne 1924, Phil. Mag. 47, 209: at T_m = T_r the effective coefficients balance as direct ones do.
+    # Milne 1924, Phil. Mag. 47, 209: at T_m = T_r the effective coefficients balance as direct
+    # ones do.
     ladder = hydrogen_ladder(12, "measured", kept)
     levels = ladder.kept
     for kelvin in (300.0, 3000.0):

@@ -151,9 +151,7 @@ def test_thick_sobolev_line_forgets_its_strength() -> None:
 
 def test_sobolev_is_open_where_lines_are_thin() -> None:
     thin = RECOMBINING._replace(hydrogen_density_cm3=1e-15)
-    np.testing.assert_allclose(
-        couple(Sobolev(), thin).loss, couple(Open(), thin).loss, rtol=1e-5
-    )
+    np.testing.assert_allclose(couple(Sobolev(), thin).loss, couple(Open(), thin).loss, rtol=1e-5)
 
 
 def test_lyman_alpha_while_the_universe_recombines() -> None:

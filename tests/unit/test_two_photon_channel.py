@@ -10,10 +10,10 @@ from scipy import constants as si
 from scipy.integrate import quad
 
 from levelnet.atomic.two_photon import two_photon_profile, two_photon_rate
+from levelnet.background.conditions import Conditions
 from levelnet.escape.treatment import Sobolev
 from levelnet.escape.two_photon import with_two_photon
 from levelnet.history.atom import lyman_lines
-from levelnet.background.conditions import Conditions
 from levelnet.network.coupling import GroundCoupling, blackbody_coupling
 from levelnet.network.ladder import hydrogen_ladder
 from tests.small_runs import RECOMBINING

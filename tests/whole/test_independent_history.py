@@ -147,9 +147,7 @@ class Atom:
         return float(rates @ (solution - rest))
 
 
-def integrate(
-    n_max: int, redshift: np.ndarray, tolerance: float
-) -> tuple[np.ndarray, np.ndarray]:
+def integrate(n_max: int, redshift: np.ndarray, tolerance: float) -> tuple[np.ndarray, np.ndarray]:
     """x_p and T_m at descending redshifts, from Saha equilibrium well above the first."""
     atom, universe = Atom(n_max), Universe()
     start = 1900.0

@@ -130,9 +130,7 @@ def test_matter_cools_adiabatically_to_well_below_a_kelvin() -> None:
     # Without heating T_m ~ (1 + z)^2 (adiabatic index 5/3; common practice). Compton heating still
     # counts a little below z = 20.
     low = history.redshift < 20.0
-    power = np.gradient(
-        np.log(history.matter_temperature_k[low]), np.log1p(history.redshift[low])
-    )
+    power = np.gradient(np.log(history.matter_temperature_k[low]), np.log1p(history.redshift[low]))
     assert np.all(np.diff(power) > 0.0)
     assert 1.9 < power[0] < power[-1] < 2.0
     assert power[-1] > 1.998
@@ -220,17 +218,13 @@ def test_a_treatment_of_your_own() -> None:
 def test_tabulated_expansion_gives_the_same_history() -> None:
     tabulated = with_expansion(COSMOLOGY, COSMOLOGY.hubble_rate_per_s)
     assert tabulated.expansion_redshift is not None
-    plain, table = (
-        solve(small_setup(4, 20.0, 30, cosmology=c)) for c in (COSMOLOGY, tabulated)
-    )
+    plain, table = (solve(small_setup(4, 20.0, 30, cosmology=c)) for c in (COSMOLOGY, tabulated))
     for name in ("free_electron_fraction", "neutral_hydrogen_fraction", "matter_temperature_k"):
         np.testing.assert_allclose(getattr(table, name), getattr(plain, name), rtol=STEPPING)
 
 
 def test_every_lyman_line_open_runs_without_a_murmur() -> None:
-    one, every = (
-        solve(small_setup(10, 800.0, 5, lines={"lyman_lines": n})) for n in (1, "all")
-    )
+    one, every = (solve(small_setup(10, 800.0, 5, lines={"lyman_lines": n})) for n in (1, "all"))
     change = every.free_electron_fraction / one.free_electron_fraction - 1.0
     # More exits, fewer ions: some 1e-4 to 1e-3.
     assert np.all((change[1:] < 0.0) & (change[1:] > -2e-3))

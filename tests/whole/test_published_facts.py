@@ -14,6 +14,7 @@ from scipy import constants as si
 from scipy.integrate import solve_ivp
 from scipy.interpolate import CubicSpline
 from scipy.optimize import brentq
+from scipy.special import zeta
 
 from levelnet.atomic.bound_bound import einstein_a
 from levelnet.atomic.levels import hydrogenic_levels
@@ -98,8 +99,8 @@ def test_neutral_near_3000_k_and_380000_years() -> None:
 
 
 def test_a_billion_photons_per_nucleus() -> None:
-    # Common practice: about 1e9. Photons of a blackbody: 16 pi zeta(3) (kT/hc)^3 (zeta(3) = 1.20206).
-    photons = 16.0 * math.pi * 1.2020569 * (si.k * 2.7255 / (si.h * si.c)) ** 3
+    # Common practice: about 1e9. Photons of a blackbody: 16 pi zeta(3) (kT/hc)^3.
+    photons = 16.0 * math.pi * float(zeta(3.0)) * (si.k * 2.7255 / (si.h * si.c)) ** 3
     hydrogen = COSMOLOGY.hydrogen_density_cm3(0.0) * 1e6
     nucleons = hydrogen * (1.0 + 4.0 * COSMOLOGY.helium_ratio())
     assert 1e9 < photons / nucleons < 2.5e9
@@ -136,8 +137,8 @@ def test_most_atoms_through_the_two_photon_channel() -> None:
 
 
 def test_without_that_channel_recombination_comes_later() -> None:
-    # Computed and stated, not assumed. Our figures at n_max = 50 (README): half ionized at z = 1211.7
-    # instead of 1272.9, tau = 1 at 1017 instead of 1090. Here the direction and the rough size.
+    # Computed, not assumed. At n_max = 50 this code has x_e = 0.5 at z = 1211.7 instead of 1272.9,
+    # tau = 1 at 1017 instead of 1090. Here the direction and the rough size only.
     without = solve(small_setup(8, 400.0, 60, hydrogen={"two_photon_rate_per_s": 0.0}))
     with_it = solve(small_setup(8, 400.0, 60))
     assert without.outcome.ok
@@ -202,8 +203,9 @@ def three_level(redshift: list[float]) -> np.ndarray:
 def test_many_levels_leave_a_tenth_fewer_electrons() -> None:
     # About 10 % below the three-level atom at z < 800 (Seager, Sasselov & Scott 2000, Astrophys. J.
     # Suppl. 128, 407; abstract), and alike where the bottleneck is n = 2 -> 1.
-    simple = three_level([1300.0, 1100.0, 500.0, 200.0])
-    change = [at(history(), z) / x - 1.0 for z, x in zip((1300.0, 1100.0, 500.0, 200.0), simple)]
+    redshifts = [1300.0, 1100.0, 500.0, 200.0]
+    simple = three_level(redshifts)
+    change = [at(history(), z) / x - 1.0 for z, x in zip(redshifts, simple, strict=True)]
     assert abs(change[0]) < 1e-3
     assert abs(change[1]) < 3e-3
     assert change[2] == pytest.approx(-0.10, abs=0.02)
