@@ -29,7 +29,7 @@ from levelnet.atomic.bound_bound import einstein_a
 from levelnet.atomic.bound_free import photoionization_cross_section, recombination_coefficient
 from levelnet.atomic.levels import reduced_mass_ratio
 from levelnet.background.conditions import Conditions
-from levelnet.history.run import integrate_history
+from levelnet.history.integrate import integrate_history
 from levelnet.network.assembly import Workspace, factor_interior, rate_matrix
 from levelnet.network.ladder import hydrogen_ladder
 from levelnet.network.populations import populations

@@ -27,7 +27,8 @@ from levelnet.atomic.detailed_balance import log_saha_factor
 from levelnet.background.cosmology import Cosmology
 from levelnet.background.matter import compton_rate_per_s
 from levelnet.history.equations import SlowEquations, ionized_and_neutral
-from levelnet.history.run import Integrated, integrate_history, solve
+from levelnet.history.integrate import Integrated, integrate_history
+from levelnet.history.run import solve
 from levelnet.history.setup import Setup
 from levelnet.network.assembly import factor_symmetric, log_line_rates, recombination_coefficients
 from levelnet.network.ladder import Ladder

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from typing import TYPE_CHECKING, NamedTuple
+from typing import NamedTuple
 
 import numpy as np
 from scipy.interpolate import CubicHermiteSpline, CubicSpline
@@ -17,13 +17,11 @@ from ..network.populations import LevelPopulations, populations
 from ..network.tabulation import TabulatedReduction
 from ..numerics.stepping import Trajectory
 from .equations import Local, SlowEquations, ionized_and_neutral
+from .integrate import Integrated, Progress
 from .observables import Visibility, dense_growth, milestones, visibility
 from .result import Channels, Diagnostics, History, LineFigures, SpeciesPopulations
 from .setup import Setup
 from .start import equilibrium_state
-
-if TYPE_CHECKING:
-    from .run import Integrated, Progress
 
 _SMALLEST_LOG = math.log(1e-300)
 SLOW_RELAXATION = 100.0

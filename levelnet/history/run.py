@@ -2,64 +2,19 @@
 
 from __future__ import annotations
 
-import math
 import warnings
-from collections.abc import Callable
-from dataclasses import dataclass
 
-import numpy as np
 from threadpoolctl import threadpool_limits
 
-from ..arrays import FloatArray
 from ..errors import AccuracyWarning
 from ..escape.treatment import LineTreatment
-from ..escape.treatment import treatment as member
 from ..escape.two_photon import STIMULATED_NOTE
-from ..network.ladder import Ladder
-from ..network.tabulation import TabulatedReduction, live_reduction, node_count, tabulate
-from ..numerics.stepping import Trajectory, integrate
-from ..pieces import Pieces, code_digest, content_key
-from .atom import build_ladder, lyman_lines
-from .cost import check_memory, table_tolerance
-from .equations import SlowEquations
+from ..pieces import Pieces
+from .cost import check_memory
+from .integrate import Progress, integrate_history
 from .outputs import assemble_history
 from .result import History
 from .setup import Setup
-from .start import Handover, equilibrium_state, find_handover
-
-Progress = Callable[[str, float], None]
-
-# Local error allowed in one step over the error asked of the whole. The equations forget, so local
-# errors hardly add up: with 1.0 the neutral fraction was measured to 0.6 and x_e to 0.03 of what is
-# asked.
-_LOCAL = 0.5
-# Size of the atom that finds the hand-over: it depends on the lowest levels only.
-_SCOUT_N = 6
-
-
-@dataclass(frozen=True, slots=True, eq=False)
-class Integrated:
-    """The slow variables of one run, before populations are worked out.
-
-    Attributes
-    ----------
-    equations : SlowEquations
-        The equations solved.
-    ladder : Ladder
-        The atom.
-    handover : Handover
-        Where the integration started.
-    redshift : ndarray, shape (n_redshift,)
-        Output redshifts, descending.
-    trajectory : Trajectory
-        Accepted steps from the hand-over down; time is ln a.
-    """
-
-    equations: SlowEquations
-    ladder: Ladder
-    handover: Handover
-    redshift: FloatArray
-    trajectory: Trajectory
 
 
 def solve(
@@ -119,130 +74,6 @@ def solve(
     if strict:
         history.require_converged()
     return history
-
-
-def integrate_history(
-    setup: Setup,
-    tell: Progress,
-    pieces: Pieces | None = None,
-    line_treatment: LineTreatment | None = None,
-) -> Integrated:
-    """Integrate the slow variables of one run; see :func:`solve` for the arguments."""
-    tell("atomic data", 0.0)
-    chosen = line_treatment or member(setup.lines.hydrogen)
-    scout = _equations(setup, build_ladder(setup, min(setup.hydrogen.n_max, _SCOUT_N)), chosen)
-    handover = find_handover(scout, 0.1 * setup.accuracy.relative)
-    ladder = build_ladder(setup)
-    redshift = _output_redshifts(setup)
-    equations = _equations(setup, ladder, chosen)
-    if setup.accuracy.interpolate:
-        table = _table(setup, ladder, max(redshift[0], handover.redshift), tell, pieces)
-        equations = _equations(setup, ladder, chosen, table)
-    trajectory = _integrate(setup, equations, handover, redshift, tell)
-    return Integrated(equations, ladder, handover, redshift, trajectory)
-
-
-def _equations(
-    setup: Setup,
-    ladder: Ladder,
-    chosen: LineTreatment,
-    table: TabulatedReduction | None = None,
-) -> SlowEquations:
-    return SlowEquations(
-        setup.cosmology,
-        table or live_reduction(ladder),
-        lyman_lines(ladder),
-        chosen,
-        setup.hydrogen.two_photon_rate_per_s,
-        setup.lines.two_photon,
-    )
-
-
-def _output_redshifts(setup: Setup) -> FloatArray:
-    """Output redshifts, descending."""
-    grid = setup.grid
-    if grid.redshifts is not None:
-        return np.array(sorted(set(grid.redshifts), reverse=True))
-    ends = math.log1p(grid.redshift_start), math.log1p(grid.redshift_end)
-    redshift = np.expm1(np.linspace(*ends, grid.n_redshifts))
-    redshift[[0, -1]] = grid.redshift_start, grid.redshift_end
-    return redshift
-
-
-def _table(
-    setup: Setup, ladder: Ladder, highest: float, tell: Progress, pieces: Pieces | None
-) -> TabulatedReduction:
-    """Reduce the network over the whole range of T_r of the run, from store where it can."""
-    low = setup.cosmology.radiation_temperature_k(float(setup.grid.redshift_end))
-    high = setup.cosmology.radiation_temperature_k(highest)
-    # Round outwards, so that equal atoms share their nodes whatever the redshifts, and the ends are
-    # inside.
-    low_k, high_k = 0.999 * float(low), 1.001 * float(high)
-    tolerance = table_tolerance(setup)
-    expected = node_count(low_k, high_k, tolerance) + 7
-    done = 0
-
-    def on_node() -> None:
-        nonlocal done
-        done += 1
-        tell("reducing the network", min(1.0, done / expected))
-
-    return tabulate(ladder, low_k, high_k, tolerance, on_node, _recall(setup, ladder, pieces))
-
-
-def _recall(
-    setup: Setup, ladder: Ladder, pieces: Pieces | None
-) -> Callable[[float, Callable[[float], FloatArray]], FloatArray] | None:
-    if pieces is None:
-        return None
-    atom = content_key(
-        "reduction",
-        code_digest(("constants", "kernels", "numerics", "atomic", "network")),
-        setup.hydrogen.n_max,
-        setup.hydrogen.energies,
-        *ladder.kept.n.tolist(),
-        *ladder.kept.l.tolist(),
-    )
-
-    def recall(temperature_k: float, compute: Callable[[float], FloatArray]) -> FloatArray:
-        key = content_key(atom, temperature_k)
-        found = pieces.get(key)
-        if found is not None and set(found) == {"node"}:
-            return found["node"]
-        value = compute(temperature_k)
-        pieces.put(key, {"node": value})
-        return value
-
-    return recall
-
-
-def _integrate(
-    setup: Setup,
-    equations: SlowEquations,
-    handover: Handover,
-    redshift: FloatArray,
-    tell: Progress,
-) -> Trajectory:
-    """Integrate from the hand-over to the last output."""
-    start = -math.log1p(handover.redshift)
-    state, _ = equilibrium_state(equations, start)
-    outputs = [s for s in (-np.log1p(redshift)).tolist() if s > start]
-    span = (outputs[-1] - start) if outputs else 1.0
-
-    def on_step(now: float) -> None:
-        tell("integrating", (now - start) / span)
-
-    return integrate(
-        equations.rate,
-        equations.jacobian,
-        start,
-        state,
-        outputs,
-        _LOCAL * setup.accuracy.relative,
-        first_step=1e-3,
-        max_steps=setup.accuracy.max_steps,
-        on_step=on_step,
-    )
 
 
 def _notes(setup: Setup) -> tuple[str, ...]:

@@ -152,8 +152,9 @@ def flow_slopes(
 
     With the fates y = (M + K)^-T K^T 1 (the chance that an atom put into a kept level ends in the
     ground state) and z = 1 - y = (M + K)^-T B (that it is ionized again first),
-    dF = z.(dK d) + y.(dr - dM d). Both are solved for, so that neither is a difference. Slopes of `excess_source` are not included:
-    a treatment with a distorted field is stepped with them lagging.
+    dF = z.(dK d) + y.(dr - dM d). Both are solved for, so that neither is a difference. Slopes of
+    `excess_source` are not included: a treatment with a distorted field is stepped with them
+    lagging.
     """
     d = solution.departure
     photo = np.exp(rates.log_photoionization)

@@ -56,7 +56,7 @@ def test_each_recombination_leaves_by_one_channel() -> None:
 
 def test_electrons_gone_since_the_hand_over_are_counted() -> None:
     # By the code's own sum: 1 - x_e(end) less 1 - x_e(hand-over).
-    from levelnet.history.run import integrate_history
+    from levelnet.history.integrate import integrate_history
 
     done = integrate_history(small_setup(4), lambda stage, part: None)
     ends = done.trajectory.time[[0, -1]]
