@@ -27,6 +27,7 @@ from scipy.sparse.linalg import splu
 from levelnet import constants as const
 from levelnet.atomic.bound_bound import einstein_a
 from levelnet.atomic.bound_free import photoionization_cross_section, recombination_coefficient
+from levelnet.atomic.detailed_balance import log_saha_factor
 from levelnet.atomic.levels import reduced_mass_ratio
 from levelnet.background.conditions import Conditions
 from levelnet.history.integrate import integrate_history
@@ -90,8 +91,6 @@ def equilibrium_and_conservation(n_max: int) -> tuple[float, float]:
     departure = imbalance = 0.0
     for t in TEMPERATURES_K:
         factored = factor_interior(ladder, t, work)
-        from levelnet.atomic.detailed_balance import log_saha_factor
-
         log_kept = log_saha_factor(
             ladder.kept.statistical_weight, ladder.kept.ionization_energy_ev, t
         )
@@ -134,7 +133,7 @@ def history_against_radau() -> float:
 
 
 def interpolated_against_direct() -> tuple[float, float]:
-    """x_e and T_m at n_max = 10 with and without interpolation, and the error stored with the run."""
+    """x_e and T_m at n_max = 10 with and without interpolation, and the error as stored."""
     plain = setup(10, 1e-5)
     direct = dataclasses.replace(
         plain, accuracy=dataclasses.replace(plain.accuracy, interpolate=False)
@@ -144,18 +143,23 @@ def interpolated_against_direct() -> tuple[float, float]:
     return error, first.equations.reduced.interpolation_error
 
 
+def line(what: str, figure: float) -> None:
+    """Print one check."""
+    print(f"{what:62s} {figure:.1e}", flush=True)
+
+
 if __name__ == "__main__":
-    print(f"Einstein A, n <= 120, against Gordon 1929 in mpmath:        {worst_error():.1e}")
-    print(f"Einstein A, n = 1000, against Gordon 1929 in mpmath:        {lines_at_the_top():.1e}")
-    print(f"cross sections 1s, 2s, 2p, against Stobbe 1930:             {cross_sections():.1e}")
-    print(f"case-B recombination, 1000 to 25000 K, against Hummer 1994: {case_b():.1e}")
+    line("Einstein A, n <= 120, against Gordon 1929 in mpmath", worst_error())
+    line("Einstein A, n = 1000, against Gordon 1929 in mpmath", lines_at_the_top())
+    line("cross sections 1s, 2s, 2p, against Stobbe 1930", cross_sections())
+    line("case-B recombination, 1000 to 25000 K, against Hummer 1994", case_b())
     for size in (30, 100, 300):
         logs, imbalance = equilibrium_and_conservation(size)
-        print(f"equilibrium, n_max = {size:3d}, 30 to 6000 K, largest |ln b|:       {logs:.1e}")
-        print(f"conservation, n_max = {size:3d}, 30 to 6000 K:                      {imbalance:.1e}")
-    print(f"block elimination, n_max = 30, against scipy splu:          {against_splu(30):.1e}")
-    print(f"block elimination, n_max = 100, against scipy splu:         {against_splu(100):.1e}")
+        line(f"equilibrium, n_max = {size}, 30 to 6000 K, largest |ln b|", logs)
+        line(f"conservation, n_max = {size}, 30 to 6000 K", imbalance)
+    line("block elimination, n_max = 30, against scipy splu", against_splu(30))
+    line("block elimination, n_max = 100, against scipy splu", against_splu(100))
     error, stored = interpolated_against_direct()
-    print(f"history, n_max = 10, interpolated against direct:           {error:.1e}")
-    print(f"  (error of any reduced rate off the nodes, as stored:      {stored:.1e})")
-    print(f"history, n_max = 30, against scipy Radau with splu:         {history_against_radau():.1e}")
+    line("history, n_max = 10, interpolated against direct", error)
+    line("  error of any reduced rate off the nodes, as stored", stored)
+    line("history, n_max = 30, against scipy Radau with splu", history_against_radau())

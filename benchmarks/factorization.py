@@ -2,9 +2,10 @@
 
     python -m benchmarks.factorization [n_max ...]
 
-Both factor the same physical matrix: ours as scaled symmetric blocks (block Cholesky with the conserving
-diagonal), the rival (SuperLU through scipy.sparse.linalg.splu, default ordering) as CSC. "of dgemm" is our
-rate, 7/12 n_max^4 operations over the time, over that of a 1536^3 dgemm timed in between.
+Both factor the same physical matrix: ours as scaled symmetric blocks (block Cholesky with the
+conserving diagonal), the rival (SuperLU through scipy.sparse.linalg.splu, default ordering) as CSC.
+"of dgemm" is our rate, 7/12 n_max^4 operations over the time, over that of a 1536^3 dgemm timed in
+between.
 """
 
 from __future__ import annotations

@@ -2,11 +2,11 @@
 
     python -m benchmarks.history
 
-1. A full l-resolved history at n_max = 100, populations at 200 redshifts included, in units of factoring
-   100 nodes.
-2. x_e and T_m at n_max = 50 against the same equations with scipy: the whole rate matrix refactored by
-   splu at each evaluation inside solve_ivp(BDF). Errors of both are measured against a run with relative =
-   1e-9; the rival's tolerance is the loosest that reaches our error.
+1. A full l-resolved history at n_max = 100, populations at 200 redshifts included, in units of
+   factoring 100 nodes.
+2. x_e and T_m at n_max = 50 against the same equations with scipy: the whole rate matrix refactored
+   by splu at each evaluation inside solve_ivp(BDF). Errors of both are measured against a run with
+   relative = 1e-9; the rival's tolerance is the loosest of those listed that reaches our error.
 """
 
 from __future__ import annotations
@@ -96,7 +96,7 @@ class GeneralSolver:
         )
 
     def losses(self, t_r: float, column: float) -> np.ndarray:
-        """Rates to the ground state: two-photon decay of 2s, Sobolev escape of Lyman-alpha from 2p."""
+        """Rates to the ground state: two-photon decay of 2s, escape of Lyman-alpha from 2p."""
         line = self.equations.lines
         depth = line.weight_ratio[0] * line.einstein_a_per_s[0] * line.wavelength_cm[0] ** 3
         depth *= column / (8.0 * math.pi)
@@ -187,7 +187,8 @@ def against_general_solver() -> None:
         rival_error = largest_error(found[0].y.T, exact)
         print(
             f"n_max 50: error {error:.1e}, rival {rival_error:.1e} (BDF at {tolerance:g}, "
-            f"{found[0].nfev} evaluations) | {seconds / own:.1f} x | {own:.2f} s against {seconds:.1f} s",
+            f"{found[0].nfev} evaluations) | {seconds / own:.1f} x | "
+            f"{own:.2f} s against {seconds:.1f} s",
             flush=True,
         )
         if rival_error <= error:

@@ -2,8 +2,8 @@
 
     python -m benchmarks.lines [n_max ...]
 
-The reference is Gordon's closed form (Gordon 1929, Ann. Phys. 394, 1031) in 200-digit arithmetic (mpmath), at
-n <= 120. One coefficient is one pair (n, l) - (n', l + 1) with n != n'.
+The reference is Gordon's closed form (Gordon 1929, Ann. Phys. 394, 1031) in 200-digit arithmetic
+(mpmath), at n <= 120. One coefficient is one pair (n, l) - (n', l + 1) with n != n'.
 """
 
 from __future__ import annotations

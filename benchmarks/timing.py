@@ -16,7 +16,7 @@ from scipy.linalg import blas
 
 
 def cpu_seconds(action: Callable[[], object]) -> float:
-    """Process time of one call, s: on a shared machine it is steadier than the clock on the wall."""
+    """Process time of one call, s: steadier on a shared machine than the clock on the wall."""
     start = time.process_time()
     action()
     return time.process_time() - start
@@ -27,7 +27,7 @@ def best_of(
     repeats: int,
     prepare: Callable[[], object] | None = None,
 ) -> list[float]:
-    """Best time of each action, s; the actions alternate, `prepare` runs untimed before the first."""
+    """Best time of each action, s; they alternate, `prepare` runs untimed before the first."""
     best = [np.inf] * len(actions)
     for _ in range(repeats):
         for k, action in enumerate(actions):
@@ -52,9 +52,11 @@ def machine() -> str:
     processor = platform.processor() or platform.machine()
     try:
         with open("/proc/cpuinfo", encoding="ascii") as file:
-            names = [line.split(":", 1)[1].strip() for line in file if line.startswith("model name")]
+            lines = [line for line in file if line.startswith("model name")]
+            names = [line.split(":", 1)[1].strip() for line in lines]
         processor = names[0] if names else processor
     except OSError:
         pass
     versions = f"numpy {np.__version__}, scipy {scipy.__version__}, numba {numba.__version__}"
-    return f"{processor}, {os.cpu_count()} cores, one thread; Python {platform.python_version()}, {versions}"
+    python = platform.python_version()
+    return f"{processor}, {os.cpu_count()} cores, one thread; Python {python}, {versions}"
