@@ -18,6 +18,7 @@ def _fill(
     stretch: FloatArray,
     rise: float,
     shift: FloatArray,
+    lean: FloatArray,
     live: FloatArray,
     weight: float,
     downward: FloatArray,
@@ -25,12 +26,14 @@ def _fill(
 ) -> None:
     """Couplings of one level to a run of levels, all above (rise = -1) or all below it (rise = 1).
 
-    `shift` is relative to the level's own. Branch-free, so that it runs in vector registers.
+    1/(2 sinh(x/2)) is e^(-x/2) / (1 - e^-x); with fine structure x grows by d. `lean` is e^(-d/2),
+    exact; the rest is expanded. `shift` is the level's own less the other's. Branch-free, so that
+    it runs in vector registers.
     """
     for j in range(out.shape[0]):
-        # e^-a to third order in a, the effect of fine structure on the occupation number.
+        # e^-a to third order in a: what fine structure does to 1/(1 - e^-x).
         a = rise * stretch[j] * shift[j]
-        value = strength[j] * geometric[j] * ((2.0 - a) / (2.0 + a)) * live[j]
+        value = strength[j] * geometric[j] * lean[j] * ((2.0 - a) / (2.0 + a)) * live[j]
         out[j] = value
         downward[j] += value * weight
 
@@ -69,7 +72,7 @@ def symmetric_blocks(
     strength_start, start, coupling_start : ndarray of int
         Where blocks begin in `strength`, in vectors, and in `coupling`.
     geometric, stretch : ndarray, shape (n_max + 1, n_max + 1)
-        1/(2 sinh(x/2)) and coth(x/2)/2 by (n, n'), x the non-relativistic line energy over kT.
+        1/(2 sinh(x/2)) and 1/(e^x - 1) by (n, n'), x the non-relativistic line energy over kT.
     root_weight, shift, live, sink : ndarray, shape (n_unknowns,)
         Square root of the Boltzmann weight; energy above the non-relativistic one over kT; 0 for
         a level that takes no part, else 1; outflow from the network in s^-1, positive where live
@@ -84,7 +87,9 @@ def symmetric_blocks(
     n_blocks = first_n.shape[0]
     upward[:] = 0.0
     downward[:] = 0.0
-    relative = np.empty(n_max + 1)
+    relative, lean = np.empty(n_max + 1), np.empty(n_max + 1)
+    half = np.exp(-0.5 * shift)
+    whole = 1.0 / half
     for l in range(n_blocks - 1):
         low, columns = first_n[l + 1], n_max - l - 1
         above = n_max + 1 - low
@@ -96,6 +101,10 @@ def symmetric_blocks(
             for j in range(above):
                 relative[j] = shift[i] - shift[first + j]
             middle = min(max(n - low, 0), above)
+            for j in range(middle):
+                lean[j] = half[i] * whole[first + j]
+            for j in range(middle, above):
+                lean[j] = whole[i] * half[first + j]
             for a, b, rise in ((0, middle, 1.0), (middle, above, -1.0)):
                 _fill(
                     strength[row + a : row + b],
@@ -103,6 +112,7 @@ def symmetric_blocks(
                     stretch[n, low + a : low + b],
                     rise,
                     relative[a:b],
+                    lean[a:b],
                     live[first + a : first + b],
                     root_weight[i] * live[i],
                     downward[first + a : first + b],

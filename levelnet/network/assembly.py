@@ -19,6 +19,7 @@ from ..arrays import FloatArray
 from ..atomic.bound_free import recombination_weights, thermal_volume_cm3
 from ..atomic.detailed_balance import log_saha_factor
 from ..atomic.levels import ionization_scale_ev
+from ..errors import Outcome, SolveError
 from ..kernels.assembly import symmetric_blocks
 from ..numerics.block_cholesky import BlockCholesky, factor_symmetric
 from ..numerics.block_lu import BlockLU, factor_general
@@ -107,12 +108,14 @@ class FactoredInterior:
         if isinstance(self.solver, BlockLU):
             top = log_source.max()
             cold: FloatArray = self.solver.solve_transposed(np.exp(log_source - top)[None])[0]
-            return np.asarray(top + np.log(cold))
+            with np.errstate(divide="ignore"):
+                return np.asarray(top + np.log(cold))
         scaled = log_source - self.log_root_weight - 0.5 * np.log(self.diagonal)
         top = scaled.max()
         solution = self.solver.solve(np.exp(scaled - top)[None])[0]
         log_scale = self.log_root_weight - 0.5 * np.log(self.diagonal)
-        return np.asarray(top + np.log(solution) + log_scale)
+        with np.errstate(divide="ignore"):
+            return np.asarray(top + np.log(solution) + log_scale)
 
 
 @dataclass(slots=True, eq=False)
@@ -231,8 +234,9 @@ def log_line_rates(
     factor, third order in the occupation number.
     """
     plain, actual = transition_over_kt(ladder, lower, upper, temperature_k)
-    a = 0.5 / np.tanh(0.5 * plain) * (actual - plain)
-    mean = np.log(strength) - np.log(-np.expm1(-plain)) - 0.5 * plain + np.log((2 - a) / (2 + a))
+    # 1/(2 sinh(x/2)) = e^(-x/2) / (1 - e^-x): the first factor exact, the second expanded.
+    a = (actual - plain) * np.exp(-plain) / -np.expm1(-plain)
+    mean = np.log(strength) - np.log(-np.expm1(-plain)) - 0.5 * actual + np.log((2 - a) / (2 + a))
     weight = ladder.levels.statistical_weight
     half_ratio = 0.5 * (np.log(weight[upper] / weight[lower]) - actual)
     return mean + half_ratio, mean - half_ratio
@@ -265,6 +269,8 @@ def _factor_warm(
         diagonal,
         work.coupling,
     )
+    if np.any(diagonal <= 0.0):
+        raise SolveError(Outcome.SINGULAR.value)
     scale = np.sqrt(diagonal)
     solver = factor_symmetric(
         inside.shape, work.coupling, root * scale, downward, sink * root / scale, work.factor
@@ -273,14 +279,15 @@ def _factor_warm(
 
 
 def _half_angle_tables(ladder: Ladder, kt_ev: float) -> tuple[FloatArray, FloatArray]:
-    """1/(2 sinh(x/2)) and coth(x/2)/2 over (n, n'), shape (n_max + 1, n_max + 1)."""
+    """1/(2 sinh(x/2)) and 1/(e^x - 1) over (n, n'), shape (n_max + 1, n_max + 1)."""
     term = np.zeros(ladder.n_max + 1)
     term[1:] = ionization_scale_ev(ladder.charge) / kt_ev / np.arange(1.0, ladder.n_max + 1) ** 2
     half = 0.5 * np.abs(term[:, None] - term[None, :])
     half[0], half[:, 0] = 1.0, 1.0
     np.fill_diagonal(half, 1.0)  # no line there: its strength is 0
     # 1/(2 sinh y) = e^-y / (1 - e^-2y): no overflow for the coldest fields.
-    return np.exp(-half) / -np.expm1(-2.0 * half), 0.5 / np.tanh(half)
+    whole = -np.expm1(-2.0 * half)
+    return np.exp(-half) / whole, np.exp(-2.0 * half) / whole
 
 
 def _factor_cold(ladder: Ladder, temperature_k: float, sink: FloatArray) -> BlockLU:

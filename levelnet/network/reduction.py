@@ -20,6 +20,7 @@ Ali-Haimoud & Hirata 2010, Phys. Rev. D 82, 063521; Burgin 2009, Bull. Lebedev P
 
 from __future__ import annotations
 
+import heapq
 from dataclasses import dataclass
 
 import numpy as np
@@ -28,7 +29,7 @@ from .. import constants as const
 from ..arrays import FloatArray, IntArray
 from ..atomic.bound_free import recombination_weights
 from .assembly import FactoredInterior, Workspace, factor_interior
-from .ladder import Ladder, level_position, lines_of
+from .ladder import Ladder, lines_of
 
 # Below this T_r exchange over a barrier is switched off: with {2s, 2p} kept it is below e^-900 of
 # an ordinary rate. Tables are split here.
@@ -73,38 +74,38 @@ class Pairs:
 
 def exchange_pairs(ladder: Ladder) -> Pairs:
     """List the pairs of kept levels and the barrier between them."""
-    inside = set(ladder.interior.position[~ladder.interior.idle].tolist())
-    partners = [
-        lines_of(ladder, int(n), int(l))[0].tolist()
-        for n, l in zip(ladder.kept.n, ladder.kept.l, strict=True)
-    ]
-    energy = ladder.levels.energy_ev
     lower, upper = np.triu_indices(len(ladder.kept), 1)
-    barrier = np.zeros(len(lower))
-    for pair, (i, j) in enumerate(zip(lower.tolist(), upper.tolist(), strict=True)):
-        own = int(ladder.kept_position[j])
-        direct = int(ladder.kept_position[i]) in partners[j]
-        falls = any(p in inside and energy[p] < energy[own] for p in partners[j])
-        if not direct and not falls:
-            barrier[pair] = _lowest_detour_ev(ladder, i, j, inside) - energy[own]
+    climb = [_climbs_ev(ladder, own) for own in ladder.kept_position.tolist()]
+    goals = ladder.kept_position.tolist()
+    talks = zip(lower.tolist(), upper.tolist(), strict=True)
+    barrier = np.array([climb[j].get(goals[i], 0.0) for i, j in talks])
     return Pairs(lower, upper, barrier)
 
 
-def _lowest_detour_ev(ladder: Ladder, lower: int, upper: int, inside: set[int]) -> float:
-    """Smallest energy that lets an atom pass from one kept level to another via the interior."""
-    goal = int(ladder.kept_position[lower])
-    for top in range(int(ladder.kept.n[upper]) + 1, ladder.n_max + 1):
-        seen, edge = set(), {int(ladder.kept_position[upper])}
-        while edge:
-            seen |= edge
-            reached: set[int] = set()
-            for level in edge:
-                n, l = int(ladder.levels.n[level]), int(ladder.levels.l[level])
-                reached |= set(lines_of(ladder, n, l)[0].tolist())
-            if goal in reached:
-                return float(ladder.levels.energy_ev[level_position(np.array(top), np.array(0))])
-            edge = {p for p in reached if p in inside and ladder.levels.n[p] <= top} - seen
-    return float(ladder.kept.energy_ev[upper])
+def _climbs_ev(ladder: Ladder, start: int) -> dict[int, float]:
+    """Least sum of climbs from one kept level to each other through the interior (Dijkstra).
+
+    Falls cost nothing, each climb costs its energy: in a cold field an atom that must climb out of
+    a level competes with all that fall from it. No detour needs more than two shells above the
+    kept.
+    """
+    top = min(ladder.n_max, int(ladder.kept.n.max()) + 2)
+    kept = set(ladder.kept_position.tolist())
+    energy = ladder.levels.energy_ev
+    known: dict[int, float] = {}
+    queue = [(0.0, start)]
+    while queue:
+        cost, level = heapq.heappop(queue)
+        if level in known:
+            continue
+        known[level] = cost
+        if level in kept and level != start:
+            continue
+        n, l = int(ladder.levels.n[level]), int(ladder.levels.l[level])
+        for other in lines_of(ladder, n, l)[0].tolist():
+            if other not in known and ladder.levels.n[other] <= top:
+                heapq.heappush(queue, (cost + max(0.0, energy[other] - energy[level]), other))
+    return known
 
 
 def reduce_at(

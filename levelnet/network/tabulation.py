@@ -10,6 +10,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from ..arrays import FloatArray
+from ..errors import RangeError
 from ..numerics.chebyshev import ChebyshevSeries, chebyshev_nodes
 from .assembly import Workspace
 from .ladder import Ladder
@@ -93,7 +94,13 @@ class TabulatedReduction:
 
     def rates(self, radiation_temperature_k: float, matter_temperature_k: float) -> ReducedRates:
         """Effective rates; RangeError outside the tabulated T_r."""
-        x = float(np.log(radiation_temperature_k))
+        x = math.log(radiation_temperature_k)
+        low, high = self.series[0].low, self.series[-1].high
+        if not low - 1e-12 <= x <= high + 1e-12:
+            raise RangeError(
+                f"T_r = {radiation_temperature_k:g} K: outside the tabulated {math.exp(low):g} to "
+                f"{math.exp(high):g} K"
+            )
         piece = next((one for one in self.series[:-1] if x < one.high), self.series[-1])
         value, slope = piece.evaluate(x)
         return assemble_rates(

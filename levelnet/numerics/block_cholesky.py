@@ -4,8 +4,8 @@ The matrix is H = I - (B + B^T) with B >= 0 between neighbouring blocks, known o
 positive vector v with H v = c >= 0: v is the equilibrium, c what leaks out. Elimination runs from
 the last block to the first. Each eliminated block adds terms of one sign to the off-diagonals of
 the next, and the next diagonal is formed as the sum of what flows out of each unknown, so that
-nothing is ever subtracted and what the elimination conserves it conserves to rounding: the block
-form of the idea of Grassmann, Taksar & Heyman 1985, Oper. Res. 33, 1107.
+nothing is subtracted between blocks and what the elimination conserves it conserves to rounding:
+the block form of the idea of Grassmann, Taksar & Heyman 1985, Oper. Res. 33, 1107.
 
     S_last = I;  S_{l+1} = L L^T;  X = B_l L^-T;  offdiag(S_l) = -X X^T
     c_l <- c_l + X L^-1 c_{l+1}
@@ -39,7 +39,8 @@ class BlockCholesky:
     coupling : ndarray, shape (shape.n_couplings,)
         X = B L^-T of every block.
     factor : ndarray, shape (shape.n_factors,)
-        Lower triangles L of every block.
+        Lower triangles L of every block: C-ordered where every block is at most SMALL_BLOCK, else
+        Fortran-ordered.
     """
 
     shape: BlockShape

@@ -166,6 +166,29 @@ def test_a_network_without_exit_is_singular(
             network.factor()
 
 
+@pytest.mark.parametrize("large", [False, True])
+def test_a_part_without_exit_is_singular(large: bool, monkeypatch: pytest.MonkeyPatch) -> None:
+    # Two networks that do not talk: one has an exit, the other has none.
+    if large:
+        monkeypatch.setattr(block_cholesky, "SMALL_BLOCK", -1)
+    for leaking, closed in ((0, 3), (6, 0)):
+        network = symmetric_network([1, 4, 0, 1, 3], np.random.default_rng(6), 2.0, 0.1, leaking)
+        with pytest.raises(SolveError, match=rf"rate matrix is singular.*block l = {closed}"):
+            network.factor()
+
+
+@pytest.mark.parametrize("large", [False, True])
+def test_a_matrix_that_is_not_positive_is_an_error(
+    large: bool, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    if large:
+        monkeypatch.setattr(block_cholesky, "SMALL_BLOCK", -1)
+    network = symmetric_network([3, 4, 2], np.random.default_rng(6))
+    network.outflow[3:7] = -1e3  # takes back more than what leaves
+    with pytest.raises(SolveError, match="block l = 1"):
+        network.factor()
+
+
 def test_one_unknown_without_exit_is_singular() -> None:
     alone = Symmetric(BlockShape.of([1]), np.zeros(0), np.ones(1), np.zeros(1), np.zeros(1))
     with pytest.raises(SolveError, match="block l = 0"):

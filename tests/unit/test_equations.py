@@ -20,7 +20,7 @@ from tests.tolerances import ROUND_OFF
 
 # Central differences of fourth order; the step makes truncation and rounding alike.
 STEP = 2e-4
-SLOPES = 1e-6
+SLOPES = 1e-7
 each_treatment = pytest.mark.parametrize("lines", [t.name for t in TREATMENTS])
 each_mode = pytest.mark.parametrize("two_photon", ["spontaneous", "stimulated"])
 
@@ -44,7 +44,7 @@ def check_derivatives(equations: SlowEquations, s: float, y: np.ndarray) -> None
     rate = equations.rate(s, y)
     # Rounding of the rate, magnified by the difference: next to equilibrium the rate is itself a
     # difference in u of about 1e-16 of the fastest time scale.
-    noise = 1e-13 * (np.abs(rate) + np.abs(np.diag(matrix))) / STEP
+    noise = 1e-15 * (np.abs(rate) + np.abs(np.diag(matrix))) / STEP
     for k in range(2):
         unit = np.eye(2)[k]
         found = difference(lambda h, unit=unit: equations.rate(s, y + h * unit))

@@ -108,10 +108,10 @@ def test_a_peak_without_both_flanks_has_no_width() -> None:
 
 def test_half_ionized_twice_takes_the_first_from_above() -> None:
     growth = dense_growth(math.log1p(LOW), math.log1p(HIGH))
-    electrons = 0.5 - 0.4 * np.cos(growth * 4.0 * np.pi / math.log1p(HIGH))
+    electrons = 0.5 - 0.4 * np.cos(growth * 8.0 * np.pi / math.log1p(HIGH))
     found = milestones(COSMOLOGY, visibility(COSMOLOGY, growth, electrons))
-    # Rising through 1/2 at ln(1 + z) = (1/8 and 5/8) of the whole.
-    expected = math.expm1(0.625 * math.log1p(HIGH))
+    # Rising through 1/2 at 9/16 and 13/16 of ln(1 + z) of the start.
+    expected = math.expm1(13.0 / 16.0 * math.log1p(HIGH))
     assert found.half_ionized_redshift == pytest.approx(expected, rel=published(8))
 
 

@@ -12,7 +12,8 @@ from scipy import constants as si
 from scipy.integrate import cumulative_simpson
 
 from levelnet.history import outputs
-from levelnet.history.atom import lyman_lines
+from levelnet.history.atom import build_ladder, lyman_lines
+from levelnet.history.integrate import integrate_history
 from levelnet.history.result import History
 from levelnet.history.run import solve
 from tests.small_runs import COSMOLOGY, RECOMBINING, small_history, small_setup
@@ -56,7 +57,6 @@ def test_each_recombination_leaves_by_one_channel() -> None:
 
 def test_electrons_gone_since_the_hand_over_are_counted() -> None:
     # By the code's own sum: 1 - x_e(end) less 1 - x_e(hand-over).
-    from levelnet.history.integrate import integrate_history
 
     done = integrate_history(small_setup(4), lambda stage, part: None)
     ends = done.trajectory.time[[0, -1]]
@@ -188,6 +188,4 @@ def test_optical_depth_falls_with_redshift_to_nothing() -> None:
 
 def test_kept_lines_carry_the_names_of_the_channels() -> None:
     history = open_history()
-    from levelnet.history.atom import build_ladder
-
     assert lyman_lines(build_ladder(history.setup)).names == history.channels.names[1:]

@@ -15,6 +15,7 @@ from levelnet.atomic.bound_free import recombination_coefficient
 from levelnet.atomic.detailed_balance import log_saha_factor
 from levelnet.atomic.levels import reduced_mass_ratio
 from levelnet.errors import RangeError
+from levelnet.network import tabulation
 from levelnet.network.assembly import factor_interior, recombination_coefficients
 from levelnet.network.ladder import Ladder, hydrogen_ladder
 from levelnet.network.rates import assemble_rates, rate_constants, stack
@@ -156,7 +157,7 @@ def test_published_case_b() -> None:
 
 
 def test_published_split_between_2s_and_2p() -> None:
-    # Osterbrock & Ferland 2006, Astrophysics of Gaseous Nebulae, table 4.x: effective coefficients
+    # Osterbrock & Ferland 2006, Astrophysics of Gaseous Nebulae, low-density effective coefficients
     # at 1e4 K, low density: 2s 0.838e-13, 2p 1.74e-13 cm^3/s (from memory).
     to_2s, to_2p = cascade(60, 1e4)
     assert to_2s == pytest.approx(0.838e-13, rel=0.01)
@@ -376,6 +377,18 @@ def test_stored_nodes_are_used_and_counted() -> None:
     for other in (again, plain):
         assert np.array_equal(first.series[0].coefficients, other.series[0].coefficients)
     assert first.interpolation_error == again.interpolation_error == plain.interpolation_error
+
+
+def test_too_few_nodes_are_noticed_and_more_are_taken(monkeypatch: pytest.MonkeyPatch) -> None:
+    ladder = hydrogen_ladder(4, "measured", TWO)
+    monkeypatch.setattr(tabulation, "node_count", lambda *_: 4)
+    found = tabulate(ladder, 100.0, 4600.0, INTERPOLATION)
+    assert found.interpolation_error <= INTERPOLATION
+    assert found.n_nodes > 4
+    # What cannot be reached ends, and says how far it came.
+    out_of_reach = tabulate(ladder, 100.0, 4600.0, 1e-30)
+    assert 1e-30 < out_of_reach.interpolation_error < 1e-9
+    assert out_of_reach.n_nodes >= 200
 
 
 def test_error_is_measured_where_the_table_is_bad() -> None:

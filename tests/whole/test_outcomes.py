@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import dataclasses
 import math
 from functools import lru_cache
 from typing import ClassVar
@@ -163,6 +164,24 @@ def test_outputs_above_the_hand_over_only() -> None:
     np.testing.assert_allclose(history.channels.cumulative_share.sum(axis=1), 1.0, rtol=1e-13)
     assert math.isnan(history.milestones.half_ionized_redshift)
     assert math.isnan(history.milestones.visibility_width)
+
+
+def test_a_background_of_100_k_today() -> None:
+    # Recombination at z ~ 35; above, the fastest rate is 1e19 Hubble rates and its product with the
+    # smallest error of u is no slope to interpolate with.
+    hot = dataclasses.replace(COSMOLOGY, cmb_temperature_k=100.0)
+    grid = {"redshift_start": 100.0, "redshift_end": 0.0, "n_redshifts": 12}
+    history = solve(small_setup(3, cosmology=hot, grid=grid))
+    assert history.outcome is Outcome.CONVERGED
+    assert np.all(np.diff(history.free_electron_fraction) <= 0.0)
+    # Thomson depth of fully ionized hydrogen, from below: tau grows by n_e sigma_T c dt.
+    assert np.all(np.diff(history.optical_depth) < 0.0)
+    early = slice(0, 3)
+    electrons = history.hydrogen_density_cm3[early] * 6.6524587e-25 * 2.99792458e10
+    slope = electrons / history.hubble_rate_per_s[early]
+    steps = np.diff(np.log1p(history.redshift[early]))
+    found = np.diff(history.optical_depth[early]) / steps
+    assert np.all((found < slope[:-1]) & (found > slope[1:]))
 
 
 def test_outputs_across_the_hand_over_join_smoothly() -> None:
