@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-import os
+import math
 from dataclasses import dataclass
 
 from ..errors import InputError
@@ -75,18 +75,20 @@ def check_memory(setup: Setup) -> Cost:
 
 def available_memory_bytes() -> float:
     """Memory this process may still take, by the system and by the limits of a container."""
-    pages = os.sysconf("SC_AVPHYS_PAGES") * os.sysconf("SC_PAGE_SIZE")
-    limits = [_available_from_proc() or pages]
-    for path in ("/sys/fs/cgroup/memory.max", "/sys/fs/cgroup/memory/memory.limit_in_bytes"):
+    limits = [_from_proc()]
+    for folder, limit, used in (
+        ("/sys/fs/cgroup", "memory.max", "memory.current"),
+        ("/sys/fs/cgroup/memory", "memory.limit_in_bytes", "memory.usage_in_bytes"),
+    ):
         try:
-            with open(path, encoding="ascii") as file:
-                limits.append(float(file.read()))
+            limits.append(_number(f"{folder}/{limit}") - _number(f"{folder}/{used}"))
         except (OSError, ValueError):  # no such limit, or "max"
             continue
     return min(limits)
 
 
-def _available_from_proc() -> float | None:
+def _from_proc() -> float:
+    """Memory available by the kernel's own estimate; infinite where it does not say."""
     try:
         with open("/proc/meminfo", encoding="ascii") as file:
             for line in file:
@@ -94,7 +96,12 @@ def _available_from_proc() -> float | None:
                     return float(line.split()[1]) * 1024.0
     except OSError:
         pass
-    return None
+    return math.inf
+
+
+def _number(path: str) -> float:
+    with open(path, encoding="ascii") as file:
+        return float(file.read())
 
 
 def _readable(size: float) -> str:

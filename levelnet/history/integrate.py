@@ -71,7 +71,8 @@ def integrate_history(
     redshift = _output_redshifts(setup)
     equations = _equations(setup, ladder, chosen)
     if setup.accuracy.interpolate:
-        table = _table(setup, ladder, max(redshift[0], handover.redshift), tell, pieces)
+        span = min(redshift[-1], handover.redshift), max(redshift[0], handover.redshift)
+        table = _table(setup, ladder, span, tell, pieces)
         equations = _equations(setup, ladder, chosen, table)
     trajectory = _integrate(setup, equations, handover, redshift, tell)
     return Integrated(equations, ladder, handover, redshift, trajectory)
@@ -105,11 +106,14 @@ def _output_redshifts(setup: Setup) -> FloatArray:
 
 
 def _table(
-    setup: Setup, ladder: Ladder, highest: float, tell: Progress, pieces: Pieces | None
+    setup: Setup,
+    ladder: Ladder,
+    span: tuple[float, float],
+    tell: Progress,
+    pieces: Pieces | None,
 ) -> TabulatedReduction:
     """Reduce the network over the whole range of T_r of the run, from store where it can."""
-    low = setup.cosmology.radiation_temperature_k(float(setup.grid.redshift_end))
-    high = setup.cosmology.radiation_temperature_k(highest)
+    low, high = (setup.cosmology.radiation_temperature_k(float(z)) for z in span)
     # Round outwards, so that equal atoms share their nodes whatever the redshifts, and the ends are
     # inside.
     low_k, high_k = 0.999 * float(low), 1.001 * float(high)

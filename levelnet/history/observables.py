@@ -22,6 +22,8 @@ from .result import Milestones
 
 # Points per unit of ln(1 + z); doubling them moves the milestones by less than 1e-7.
 _DENSITY = 1500
+# x_e at the lowest redshift above which the optical depth from there says nothing about z_*.
+_LITTLE = 0.01
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -82,7 +84,10 @@ def visibility(
 def milestones(cosmology: Cosmology, seen: Visibility) -> Milestones:
     """Sum up a history in a few numbers; NaN where the grid does not reach the event."""
     x = seen.log_growth
-    last = _crossing(x, seen.optical_depth(x) - 1.0, lambda y: float(seen.optical_depth(y)) - 1.0)
+    last = float("nan")
+    if seen.electron_fraction[0] < _LITTLE:  # else most of the optical depth lies below the grid
+        depth = seen.optical_depth
+        last = _crossing(x, depth(x) - 1.0, lambda y: float(depth(y)) - 1.0)
     peak, width = _peak_and_width(x, seen.log_visibility)
     half = CubicSpline(x, seen.electron_fraction - 0.5)
     return Milestones(

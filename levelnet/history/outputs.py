@@ -3,15 +3,16 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Callable
 from typing import NamedTuple
 
 import numpy as np
-from scipy.interpolate import CubicHermiteSpline, CubicSpline
+from scipy.interpolate import CubicSpline
 
 from .. import constants as const
 from ..arrays import FloatArray
 from ..background.conditions import Conditions
-from ..errors import Outcome
+from ..errors import Outcome, SolveError
 from ..network.assembly import Workspace, factor_interior
 from ..network.populations import LevelPopulations, populations
 from ..network.tabulation import TabulatedReduction
@@ -47,6 +48,8 @@ def assemble_history(
     reached = -np.log1p(integrated.redshift) <= trajectory.time[-1] + 1e-12
     reached |= integrated.redshift >= integrated.handover.redshift
     redshift = integrated.redshift[reached]
+    if not len(redshift):
+        raise SolveError(trajectory.outcome.value)
     outputs = _outputs(integrated, redshift, tell)
     slowest = min((o.relaxation_hubble for o in outputs), default=math.inf)
     outcome = trajectory.outcome
@@ -118,7 +121,7 @@ def _visibility(integrated: Integrated, redshift: FloatArray) -> Visibility:
     below = log_growth < handover
     trajectory = integrated.trajectory
     if below.any():
-        curve = CubicHermiteSpline(trajectory.time, trajectory.state[:, 0], trajectory.rate[:, 0])
+        curve = CubicSpline(trajectory.time, trajectory.state[:, 0])
         log_odds[below] = curve(-log_growth[below])
     for k in np.flatnonzero(~below):
         log_odds[k] = equilibrium_state(integrated.equations, -log_growth[k])[0][0]
@@ -147,16 +150,24 @@ def _channels(integrated: Integrated, redshift: FloatArray, outputs: list[_Outpu
     return Channels(names, net, share, cumulative)
 
 
-def _cumulative(equations: SlowEquations, trajectory: Trajectory) -> CubicSpline:
-    """Net recombinations per hydrogen nucleus since the hand-over, by channel, over ln a."""
-    flows = []
-    for s, state in zip(trajectory.time.tolist(), trajectory.state, strict=True):
-        local = equations.local(s, state)
-        flows.append(local.solution.flow / local.conditions.hubble_rate_per_s)
-    if len(flows) < 2:
+def _cumulative(
+    equations: SlowEquations, trajectory: Trajectory
+) -> Callable[[FloatArray], FloatArray]:
+    """Net recombinations per hydrogen nucleus since the hand-over, by channel, over ln a.
+
+    The share of each channel is integrated over the change of x_HI: early on, where the equations
+    are stiff, the net flow itself holds the local error times the relaxation rate.
+    """
+    if len(trajectory.time) < 2:
         return lambda s: np.zeros((len(s), len(equations.reduced.kept)))
-    total = CubicSpline(trajectory.time, np.array(flows)).antiderivative()
-    return lambda s: total(np.maximum(s, trajectory.time[0]))
+    shares = []
+    for s, state in zip(trajectory.time.tolist(), trajectory.state, strict=True):
+        flow = equations.local(s, state).solution.flow
+        shares.append(flow / flow.sum())
+    neutral = np.array([ionized_and_neutral(u)[1] for u in trajectory.state[:, 0].tolist()])
+    gain = CubicSpline(trajectory.time, neutral).derivative()(trajectory.time)
+    total = CubicSpline(trajectory.time, gain[:, None] * np.array(shares)).antiderivative()
+    return lambda s: np.asarray(total(np.maximum(s, trajectory.time[0])))
 
 
 def _line_figures(integrated: Integrated, outputs: list[_Output]) -> LineFigures:

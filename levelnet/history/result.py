@@ -118,7 +118,8 @@ class Milestones:
     Attributes
     ----------
     last_scattering_redshift : float
-        z_* where the optical depth from `redshift_end` is 1.
+        z_* where the optical depth from `redshift_end` is 1; NaN where x_e is still above 0.01 at
+        `redshift_end`, since most of the optical depth then lies below.
     visibility_peak_redshift : float
         Where g(eta) peaks.
     visibility_width : float

@@ -69,10 +69,10 @@ def solve(
     with threadpool_limits(limits=1, user_api="blas"):
         integrated = integrate_history(setup, tell, pieces, line_treatment)
         history = assemble_history(setup, integrated, _notes(setup), tell)
-    if not history.outcome.ok:
-        warnings.warn(history.outcome.value, AccuracyWarning, stacklevel=2)
     if strict:
         history.require_converged()
+    elif not history.outcome.ok:
+        warnings.warn(history.outcome.value, AccuracyWarning, stacklevel=2)
     return history
 
 

@@ -13,9 +13,9 @@ from ..background.matter import saha_log_odds
 from ..errors import InputError
 from .equations import SlowEquations
 
-# Redshifts between which a hand-over is looked for; Saha equilibrium of hydrogen holds at the upper
-# end in any cosmology the setup admits.
-_LOWEST, _HIGHEST = 400.0, 9000.0
+# T_r between which a hand-over is looked for, in steps of 5 per cent; at the upper end hydrogen is
+# in Saha equilibrium in any cosmology the setup admits.
+_COLDEST_K, _HOTTEST_K, _FACTOR = 1100.0, 25_000.0, 1.05
 
 
 @dataclass(frozen=True, slots=True)
@@ -87,15 +87,23 @@ def find_handover(equations: SlowEquations, tolerance: float) -> Handover:
         lag = abs(equilibrium_state(equations, -log_growth)[1])
         return math.log(lag / tolerance)
 
-    low, high = math.log1p(_LOWEST), math.log1p(_HIGHEST)
-    if excess(high) > 0.0:
-        raise InputError(
-            "lines, hydrogen.two_photon_rate_per_s: hydrogen has no channel to the ground state "
-            f"strong enough to be in Saha equilibrium at z = {_HIGHEST:g}"
-        )
+    today = float(equations.cosmology.radiation_temperature_k(0.0))
+    low = math.log(_COLDEST_K / today)
     if excess(low) < 0.0:
-        return Handover(_LOWEST, abs(equilibrium_state(equations, -low)[1]))
-    found = brentq(excess, low, high, xtol=1e-3)
-    # Round up, so that the tolerance holds and the start is a plain number.
-    redshift = math.ceil(math.expm1(found) / 10.0) * 10.0
+        return _handover(equations, math.expm1(low))
+    while math.exp(low) * today < _HOTTEST_K:
+        high = low + math.log(_FACTOR)
+        if excess(high) < 0.0:
+            redshift = math.expm1(brentq(excess, low, high, xtol=1e-3))
+            # Round up, so that the tolerance holds and the start is a plain number.
+            unit = 10.0 ** math.floor(math.log10(redshift) - 2.0)
+            return _handover(equations, math.ceil(redshift / unit) * unit)
+        low = high
+    raise InputError(
+        "lines, hydrogen.two_photon_rate_per_s: hydrogen has no channel to the ground state strong "
+        f"enough to be in Saha equilibrium at T_r = {_HOTTEST_K:g} K"
+    )
+
+
+def _handover(equations: SlowEquations, redshift: float) -> Handover:
     return Handover(redshift, abs(equilibrium_state(equations, -math.log1p(redshift))[1]))

@@ -159,7 +159,9 @@ def flow_slopes(
     d = solution.departure
     photo = np.exp(rates.log_photoionization)
     ends = np.stack([coupling.loss.sum(axis=0), photo], axis=1)
-    fate, ionized_again = lapack.dgesv(solution.matrix.T, ends)[2].T
+    # Exits differ by hundreds of decades; scaled to 1, pivoting does not lose the slow ones.
+    exits = np.diagonal(solution.matrix)[:, None]
+    fate, ionized_again = lapack.dgesv(solution.matrix.T / exits, ends / exits)[2].T
     kt = const.BOLTZMANN_EV_K * conditions.radiation_temperature_k
     capture, lift = fate * solution.capture, fate * solution.lift
     by_column = float(ionized_again @ (coupling.slope_column @ d))

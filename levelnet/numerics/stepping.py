@@ -18,7 +18,7 @@ import numpy as np
 from scipy.linalg import lapack
 
 from ..arrays import FloatArray
-from ..errors import Outcome
+from ..errors import Outcome, SolveError
 
 Rate = Callable[[float, FloatArray], FloatArray]
 Jacobian = Callable[[float, FloatArray], tuple[FloatArray, FloatArray]]
@@ -60,8 +60,9 @@ class Trajectory:
     ----------
     time : ndarray, shape (n_points,)
         Start, every accepted step end; each asked output is one of them, exactly.
-    state, rate : ndarray, shape (n_points, n_variables)
-        The variables and their derivatives there.
+    state : ndarray, shape (n_points, n_variables)
+        The variables there. Their rates are not kept: of a stiff variable the rate holds the local
+        error times the relaxation rate and is no slope of the solution.
     outcome : Outcome
         How it ended; where it is not CONVERGED the arrays end early.
     rejected, evaluations : int
@@ -70,7 +71,6 @@ class Trajectory:
 
     time: FloatArray
     state: FloatArray
-    rate: FloatArray
     outcome: Outcome
     rejected: int
     evaluations: int
@@ -130,7 +130,7 @@ def integrate(  # noqa: PLR0913 (each is a choice of the caller)
     Parameters
     ----------
     rate, jacobian : callable
-        As for :func:`rosenbrock_step`.
+        As for :func:`rosenbrock_step`; a SolveError of theirs ends the integration as SINGULAR.
     start : float
         Initial time.
     state : ndarray, shape (n,)
@@ -153,7 +153,7 @@ def integrate(  # noqa: PLR0913 (each is a choice of the caller)
     """
     now, y, step = start, np.asarray(state, dtype=np.float64), first_step
     slope = rate(now, y)
-    times, states, slopes = [now], [y], [slope]
+    times, states = [now], [y]
     rejected, evaluations, outcome = 0, 1, Outcome.CONVERGED
     for target in outputs:
         while now < target and outcome.ok:
@@ -163,7 +163,11 @@ def integrate(  # noqa: PLR0913 (each is a choice of the caller)
             # Stretch or split evenly rather than leave a sliver before the output.
             pieces = max(1, int(np.ceil((target - now) / step - 0.1)))
             trial = (target - now) / pieces
-            new, error = rosenbrock_step(rate, jacobian, now, y, slope, trial)
+            try:
+                new, error = rosenbrock_step(rate, jacobian, now, y, slope, trial)
+            except SolveError:
+                outcome = Outcome.SINGULAR
+                break
             evaluations += 7
             size = float(np.max(np.abs(error))) / tolerance
             if not np.isfinite(size):
@@ -180,9 +184,6 @@ def integrate(  # noqa: PLR0913 (each is a choice of the caller)
             y, slope = new, rate(now, new)
             times.append(now)
             states.append(y)
-            slopes.append(slope)
             if on_step is not None:
                 on_step(now)
-    return Trajectory(
-        np.array(times), np.array(states), np.array(slopes), outcome, rejected, evaluations
-    )
+    return Trajectory(np.array(times), np.array(states), outcome, rejected, evaluations)

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import builtins
 import io
-import os
+import math
 from typing import Any
 
 import pytest
@@ -88,18 +88,21 @@ def test_memory_is_the_least_of_what_the_system_says(monkeypatch: pytest.MonkeyP
     meminfo = "MemTotal: 9000000 kB\nMemAvailable: 4000000 kB\n"
     fake_files(monkeypatch, {"/proc/meminfo": meminfo, "/sys/fs/cgroup/memory.max": "max\n"})
     assert cost.available_memory_bytes() == 4000000 * 1024
-    limit = {"/proc/meminfo": meminfo, "/sys/fs/cgroup/memory.max": "1000000000\n"}
-    fake_files(monkeypatch, limit)
-    assert cost.available_memory_bytes() <= 1e9
+    for folder, limit, used in (
+        ("/sys/fs/cgroup", "memory.max", "memory.current"),
+        ("/sys/fs/cgroup/memory", "memory.limit_in_bytes", "memory.usage_in_bytes"),
+    ):
+        container = {f"{folder}/{limit}": "1000000000\n", f"{folder}/{used}": "400000000\n"}
+        fake_files(monkeypatch, {"/proc/meminfo": meminfo, **container})
+        assert cost.available_memory_bytes() == 6e8
 
 
 @pytest.mark.parametrize("meminfo", [{}, {"/proc/meminfo": "MemTotal: 9000000 kB\n"}])
-def test_without_figures_of_the_kernel_pages_are_counted(
+def test_a_system_that_does_not_say_refuses_nothing(
     monkeypatch: pytest.MonkeyPatch, meminfo: dict[str, str]
 ) -> None:
     fake_files(monkeypatch, meminfo)
-    monkeypatch.setattr(os, "sysconf", {"SC_AVPHYS_PAGES": 1000, "SC_PAGE_SIZE": 4096}.__getitem__)
-    assert cost.available_memory_bytes() == 4096000
+    assert cost.available_memory_bytes() == math.inf
 
 
 @pytest.mark.parametrize(
