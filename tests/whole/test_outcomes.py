@@ -287,7 +287,7 @@ def test_nonrelativistic_energies_change_little() -> None:
 
 
 def test_sealed_lines_end_as_an_outcome_down_to_today() -> None:
-    # Every exit of 2p underflows: an outcome, with what there is, and no warning from the arithmetic.
+    # Every exit of 2p underflows: an outcome with what there is, no warning from the arithmetic.
     setup = small_setup(4, 0.0, 20, lines={"hydrogen": "closed"})
     with pytest.warns(AccuracyWarning):
         history = solve(setup)
