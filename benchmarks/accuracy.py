@@ -70,16 +70,17 @@ def case_b() -> float:
     table = read_table("hydrogen/case_b_recombination")
     worst = 0.0
     names = list(table.numbers)
+    mass = reduced_mass_ratio()
     for log_t, published in zip(table.numbers[names[0]], table.numbers[names[1]], strict=True):
-        t = 10.0**log_t
+        # The table is for infinite nuclear mass: alpha_inf(T) = mu^2 alpha(mu T), mu over m_e.
+        t = 10.0**log_t * mass
         shells = []
         for n in range(2, 301):
             l = np.arange(n)
             shells.append(float(recombination_coefficient(np.full(n, n), l, t).sum()))
         slope = np.log(shells[-1] / shells[-50]) / np.log(300.0 / 251.0)
         tail = shells[-1] * 300.5 / (-slope - 1.0) * (300.5 / 300.0) ** slope
-        # The published table is for infinite nuclear mass.
-        total = (sum(shells) + tail) * np.sqrt(t) / 1e-11 * reduced_mass_ratio() ** 1.5
+        total = (sum(shells) + tail) * mass**2 * np.sqrt(10.0**log_t) / 1e-11
         worst = max(worst, abs(total / published - 1.0))
     return worst
 

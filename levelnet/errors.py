@@ -3,6 +3,32 @@
 from enum import Enum
 
 
+class Outcome(Enum):
+    """How a calculation ended; the value is one sentence: what happened, what to try."""
+
+    CONVERGED = "converged to the tolerance asked"
+    QUASI_STEADY_LOST = (
+        "an excited level relaxes more slowly than the universe expands, so its quasi-steady "
+        "population means nothing at the lowest redshifts; end the grid higher or open a channel"
+    )
+    STEP_LIMIT = "the step limit was reached; loosen accuracy.relative or raise accuracy.max_steps"
+    STEP_TOO_SMALL = (
+        "the step size shrank to nothing; check the expansion table and the chosen line treatment "
+        "for jumps"
+    )
+    TABLE_TOO_COARSE = (
+        "the reduced network could not be interpolated to the tolerance; loosen accuracy.relative "
+        "or set accuracy.interpolate = false"
+    )
+    SINGULAR = "the rate matrix is singular; some level has no exit in the chosen line treatment"
+    NONPOSITIVE_POPULATION = "a population came out negative; please report the setup as a bug"
+
+    @property
+    def ok(self) -> bool:
+        """True where the result may be used as it stands."""
+        return self is Outcome.CONVERGED
+
+
 class LevelnetError(Exception):
     """Base of every error that levelnet raises on purpose; its text is one clear line."""
 
@@ -24,34 +50,23 @@ class FileFormatError(InputError):
 
 
 class SolveError(LevelnetError):
-    """A calculation that failed; ``partial`` holds what was computed before, or None."""
+    """A calculation that failed.
 
-    def __init__(self, message: str, partial: object = None) -> None:
+    Attributes
+    ----------
+    partial : object
+        What was computed before, or None.
+    outcome : Outcome
+        How it ended.
+    """
+
+    def __init__(
+        self, message: str, partial: object = None, outcome: Outcome | None = None
+    ) -> None:
         super().__init__(message)
         self.partial = partial
+        self.outcome = outcome or Outcome.SINGULAR
 
 
 class AccuracyWarning(UserWarning):
     """A stated validity range is left; the text gives the figure and the limit."""
-
-
-class Outcome(Enum):
-    """How a calculation ended; the value is one sentence: what happened, what to try."""
-
-    CONVERGED = "converged to the tolerance asked"
-    QUASI_STEADY_LOST = (
-        "an excited level relaxes more slowly than the universe expands, so its quasi-steady "
-        "population means nothing at the lowest redshifts; end the grid higher or open a channel"
-    )
-    STEP_LIMIT = "the step limit was reached; loosen accuracy.relative or raise accuracy.max_steps"
-    STEP_TOO_SMALL = (
-        "the step size shrank to nothing; check the expansion table and the chosen line treatment "
-        "for jumps"
-    )
-    SINGULAR = "the rate matrix is singular; some level has no exit in the chosen line treatment"
-    NONPOSITIVE_POPULATION = "a population came out negative; please report the setup as a bug"
-
-    @property
-    def ok(self) -> bool:
-        """True where the result may be used as it stands."""
-        return self is Outcome.CONVERGED

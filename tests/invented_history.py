@@ -76,7 +76,9 @@ def invented_history(
         visibility=5e-3 * np.exp(-(((z - 1080.0) / 90.0) ** 2)),
         species=(populations,),
         channels=Channels(ways, by(count), shares(count), shares(count)),
-        lines=LineFigures(lines, *(by(len(lines)) * scale for scale in (1e8, 1e-8, 1e-3, 1e-2))),
+        lines=LineFigures(
+            lines, *(by(len(lines)) * scale for scale in (1e8, 1e-8, 1e-3, 1.0, 1e-3))
+        ),
         milestones=Milestones(1089.7, 1087.2, math.nan, 1274.3, math.nan),
         diagnostics=Diagnostics(1688.5, 3.1e-7, 812, 23, 4127, 40, 5.4e-10, 1.2e-14, 3.3e4),
         notes=notes,

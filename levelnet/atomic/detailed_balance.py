@@ -1,4 +1,4 @@
-"""The only place that turns a forward rate into its inverse.
+"""The relations between a rate and its inverse, and the only place that states them.
 
 In equilibrium at one temperature every process balances its inverse. Emission and recombination
 are computed from the atom; absorption and photoionization follow here, so that thermal equilibrium

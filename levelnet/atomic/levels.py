@@ -11,6 +11,12 @@ from ..arrays import FloatArray, IntArray, frozen_array
 from ..errors import InputError
 
 
+def level_name(n: int, l: int) -> str:
+    """Spectroscopic name of a level: "2s", "3d"; letters after s, p, d run from f without j."""
+    letters = "spdfghiklmnoqrtuvwxyz"
+    return f"{n}{letters[l]}" if l < len(letters) else f"{n}[l={l}]"
+
+
 def reduced_mass_ratio(charge: int = 1) -> float:
     """Reduced mass of electron and nucleus over the electron mass, mu/m_e (dimensionless).
 

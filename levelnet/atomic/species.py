@@ -13,9 +13,10 @@ class Hydrogen:
 
     Parameters
     ----------
-    n_max : int, 2 to 100000 (dimensionless)
+    n_max : int, 2 to 1000 (dimensionless)
         Highest principal quantum number; every (n, l) up to it is a level of its own. What fits is
-        decided by memory, which is estimated before any work.
+        decided by memory, which is estimated before any work; a larger n_max is refused with the
+        memory it would need.
     two_photon_rate_per_s : float, s^-1, not negative
         Total 2s-1s two-photon decay rate; 0 switches the channel off. The default is the computed
         non-relativistic 8.22487 s^-1 times the leading relativistic correction (-3.5e-5); published

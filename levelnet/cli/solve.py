@@ -84,8 +84,6 @@ def compute(setup: Setup, console: Console, cache: bool) -> tuple[History, float
     tuple of History and float
         The result, and the wall time in s.
     """
-    from threadpoolctl import threadpool_limits
-
     from ..history.cost import check_memory, estimate
     from ..history.run import solve
 
@@ -96,11 +94,8 @@ def compute(setup: Setup, console: Console, cache: bool) -> tuple[History, float
             f"estimated: {time_text(cost.seconds)}, {size_text(cost.memory_bytes)} of memory"
         )
     pieces = _cache(console) if cache else None
-    # The limit reaches only libraries that are loaded: scipy's BLAS is another one than numpy's.
-    import scipy.linalg  # noqa: F401
-
     start = time.monotonic()
-    with threadpool_limits(limits=1, user_api="blas"), console.progress() as progress:
+    with console.progress() as progress:
         history = solve(setup, progress=progress, pieces=pieces)
     return history, time.monotonic() - start
 

@@ -10,6 +10,7 @@ import numpy as np
 from .. import constants as const
 from ..arrays import FloatArray, IntArray, frozen_array
 from ..background.conditions import Conditions
+from ..errors import InputError
 from ..network.coupling import GroundCoupling, blackbody_coupling
 from ..network.reduced import KeptLevels
 from ..network.solve import log_boltzmann_populations
@@ -59,6 +60,8 @@ class ResonanceLines:
 class LineTreatment(Protocol):
     """How photons of the resonance lines escape; a member of the family or a user's own object.
 
+    A treatment has no memory: it answers from the conditions of the moment.
+
     Attributes
     ----------
     name : str
@@ -67,43 +70,40 @@ class LineTreatment(Protocol):
         Short sentences.
     holds_for : tuple of str
         Validity figures and their limits.
+    keeps : tuple of (n, l)
+        Levels to keep from elimination beyond 2s and the np of the open lines.
     """
 
     name: ClassVar[str]
     assumes: ClassVar[tuple[str, ...]]
     holds_for: ClassVar[tuple[str, ...]]
+    keeps: ClassVar[tuple[tuple[int, int], ...]]
 
     def couple(
         self,
         lines: ResonanceLines,
         kept: KeptLevels,
         conditions: Conditions,
-        memory: object,
-        step: float,
     ) -> GroundCoupling:
-        """Give K and s of the net flow K x - s to the ground state at these conditions."""
-        ...
+        """Give K and s of the net flow K x - s to the ground state at these conditions.
 
-    def advance(self, memory: object, log_population: FloatArray) -> object:
-        """Give the memory after a step that ended with these kept populations."""
+        The slopes of K by ln(n_1s/H) and ln T_r must be exact: the implicit step rests on them.
+        `validity` may hold "optical_depth" and "escape_probability" per line.
+        """
         ...
 
 
 @dataclass(frozen=True, slots=True)
-class _WithoutMemory:
-    """What treatments share whose lines each see the blackbody and remember nothing."""
+class _Isolated:
+    """What treatments share whose lines are alone and see the blackbody."""
 
-    def advance(self, memory: object, log_population: FloatArray) -> object:
-        """Give the memory back untouched."""
-        return memory
+    keeps: ClassVar[tuple[tuple[int, int], ...]] = ()
 
     def couple(
         self,
         lines: ResonanceLines,
         kept: KeptLevels,
         conditions: Conditions,
-        memory: object,
-        step: float,
     ) -> GroundCoupling:
         """Couple each line by A P (1 + f) and the blackbody that fills it."""
         kt = const.BOLTZMANN_EV_K * conditions.radiation_temperature_k
@@ -129,7 +129,7 @@ class _WithoutMemory:
             )
         )
         validity = {"optical_depth": depth, "escape_probability": chance}
-        return blackbody_coupling(loss, by_column, by_temperature, boltzmann, memory, validity)
+        return blackbody_coupling(loss, by_column, by_temperature, boltzmann, validity)
 
     def escape(self, optical_depth: FloatArray) -> tuple[FloatArray, FloatArray]:
         """Give the escape probability and its logarithmic slope in the optical depth."""
@@ -137,7 +137,7 @@ class _WithoutMemory:
 
 
 @dataclass(frozen=True, slots=True)
-class Closed(_WithoutMemory):
+class Closed(_Isolated):
     """No line photon escapes: atoms reach the ground state by two-photon decay alone."""
 
     name: ClassVar[str] = "closed"
@@ -155,7 +155,7 @@ class Closed(_WithoutMemory):
 
 
 @dataclass(frozen=True, slots=True)
-class Open(_WithoutMemory):
+class Open(_Isolated):
     """Every line photon escapes: the optically thin limit."""
 
     name: ClassVar[str] = "open"
@@ -170,7 +170,7 @@ class Open(_WithoutMemory):
 
 
 @dataclass(frozen=True, slots=True)
-class Sobolev(_WithoutMemory):
+class Sobolev(_Isolated):
     """Each line alone, photons redshifting out of it: P = (1 - e^-tau) / tau."""
 
     name: ClassVar[str] = "sobolev"
@@ -181,11 +181,10 @@ class Sobolev(_WithoutMemory):
         "No continuum absorbs inside the line.",
     )
     holds_for: ClassVar[tuple[str, ...]] = (
-        "Time to cross the thick part of the line far below a Hubble time "
-        "(crossing_time_hubble << 1). "
-        "Lyman-alpha at z ~ 1100 leaves that range; two-photon wings, recoil and diffusion then "
-        "change x_e by 1 to 2 per cent (Hirata 2008, Phys. Rev. D 78, 023001; "
-        "Chluba & Sunyaev 2009, "
+        "Widths where the line is thick far below its frequency (thick_width_absorption << 1, and "
+        "thick_width_scattering where scattering in the wings is not coherent). Two-photon wings, "
+        "recoil and diffusion in Lyman-alpha change x_e by 1 to 2 per cent (Hirata 2008, "
+        "Phys. Rev. D 78, 023001; Chluba & Sunyaev 2009, "
         "Astron. Astrophys. 503, 345).",
     )
 
@@ -199,4 +198,8 @@ TREATMENTS: tuple[LineTreatment, ...] = (Closed(), Open(), Sobolev())
 
 def treatment(name: str) -> LineTreatment:
     """The member of the family with this name."""
-    return next(member for member in TREATMENTS if member.name == name)
+    for member in TREATMENTS:
+        if member.name == name:
+            return member
+    known = ", ".join(f'"{member.name}"' for member in TREATMENTS)
+    raise InputError(f'lines.hydrogen = "{name}": known are {known}')

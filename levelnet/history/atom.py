@@ -5,6 +5,7 @@ from __future__ import annotations
 import numpy as np
 
 from ..atomic.bound_bound import einstein_a
+from ..atomic.levels import level_name
 from ..escape.treatment import ResonanceLines
 from ..network.ladder import Ladder, hydrogen_ladder
 from .setup import Setup
@@ -17,7 +18,9 @@ def open_lyman_lines(setup: Setup) -> int:
     return highest if isinstance(count, str) else count
 
 
-def build_ladder(setup: Setup, n_max: int | None = None) -> Ladder:
+def build_ladder(
+    setup: Setup, n_max: int | None = None, keeps: tuple[tuple[int, int], ...] = ()
+) -> Ladder:
     """Hydrogen of this setup; 2s, 2p and every np whose Lyman line is open are kept.
 
     Parameters
@@ -26,16 +29,20 @@ def build_ladder(setup: Setup, n_max: int | None = None) -> Ladder:
         The run.
     n_max : int, optional
         A smaller atom than asked, for estimates.
+    keeps : tuple of (n, l), optional
+        Further levels to keep, as a line treatment may ask.
     """
     top = n_max or setup.hydrogen.n_max
     count = min(open_lyman_lines(setup), top - 1)
-    kept = ((2, 0), *((n, 1) for n in range(2, count + 2)))
-    return hydrogen_ladder(top, setup.hydrogen.energies, kept)
+    kept = {(2, 0), *((n, 1) for n in range(2, count + 2))}
+    kept |= {level for level in keeps if level[0] <= top}
+    return hydrogen_ladder(top, setup.hydrogen.energies, tuple(kept))
 
 
-def lyman_lines(ladder: Ladder) -> ResonanceLines:
-    """Lyman lines from the kept np levels."""
-    upper = np.flatnonzero(ladder.kept.l == 1)
+def lyman_lines(ladder: Ladder, count: int | None = None) -> ResonanceLines:
+    """Give the first `count` Lyman lines among the kept levels; None: all of them."""
+    highest = ladder.n_max if count is None else count + 1
+    upper = np.flatnonzero((ladder.kept.l == 1) & (ladder.kept.n <= highest))
     n = ladder.kept.n[upper]
     decay = [
         float(np.sum(einstein_a(k, 1, np.arange(1, k), 0)))
@@ -43,7 +50,7 @@ def lyman_lines(ladder: Ladder) -> ResonanceLines:
         for k in n.tolist()
     ]
     return ResonanceLines(
-        tuple(f"{k}p-1s" for k in n),
+        tuple(f"{level_name(k, 1)}-1s" for k in n.tolist()),
         upper,
         einstein_a(n, np.ones_like(n), np.ones_like(n), np.zeros_like(n)),
         ladder.kept.energy_ev[upper],

@@ -124,7 +124,7 @@ class SlowEquations:
             conditions.radiation_temperature_k, conditions.matter_temperature_k
         )
         coupling = with_two_photon(
-            self.treatment.couple(self.lines, kept, conditions, None, 0.0),
+            self.treatment.couple(self.lines, kept, conditions),
             kept,
             conditions,
             self.two_photon_rate_per_s,

@@ -15,7 +15,7 @@ from ..network.ladder import Ladder
 from ..network.tabulation import TabulatedReduction, live_reduction, node_count, tabulate
 from ..numerics.stepping import Trajectory, integrate
 from ..pieces import Pieces, code_digest, content_key
-from .atom import build_ladder, lyman_lines
+from .atom import build_ladder, lyman_lines, open_lyman_lines
 from .cost import table_tolerance
 from .equations import SlowEquations
 from .setup import Setup
@@ -65,9 +65,10 @@ def integrate_history(
     """Integrate the slow variables of one run; see :func:`solve` for the arguments."""
     tell("atomic data", 0.0)
     chosen = line_treatment or member(setup.lines.hydrogen)
-    scout = _equations(setup, build_ladder(setup, min(setup.hydrogen.n_max, _SCOUT_N)), chosen)
+    scout_n = min(setup.hydrogen.n_max, _SCOUT_N)
+    scout = _equations(setup, build_ladder(setup, scout_n, chosen.keeps), chosen)
     handover = find_handover(scout, 0.1 * setup.accuracy.relative)
-    ladder = build_ladder(setup)
+    ladder = build_ladder(setup, keeps=chosen.keeps)
     redshift = _output_redshifts(setup)
     equations = _equations(setup, ladder, chosen)
     if setup.accuracy.interpolate:
@@ -87,7 +88,7 @@ def _equations(
     return SlowEquations(
         setup.cosmology,
         table or live_reduction(ladder),
-        lyman_lines(ladder),
+        lyman_lines(ladder, open_lyman_lines(setup)),
         chosen,
         setup.hydrogen.two_photon_rate_per_s,
         setup.lines.two_photon,
@@ -114,9 +115,9 @@ def _table(
 ) -> TabulatedReduction:
     """Reduce the network over the whole range of T_r of the run, from store where it can."""
     low, high = (setup.cosmology.radiation_temperature_k(float(z)) for z in span)
-    # Round outwards, so that equal atoms share their nodes whatever the redshifts, and the ends are
-    # inside.
-    low_k, high_k = 0.999 * float(low), 1.001 * float(high)
+    # Outwards to a lattice, so that runs of one atom share their nodes whatever the universe.
+    low_k = 2.0 ** (math.floor(4.0 * math.log2(float(low))) / 4.0)
+    high_k = 2.0 ** (math.ceil(4.0 * math.log2(float(high))) / 4.0)
     tolerance = table_tolerance(setup)
     expected = node_count(low_k, high_k, tolerance) + 7
     done = 0
@@ -137,6 +138,8 @@ def _recall(
     atom = content_key(
         "reduction",
         code_digest(("constants", "kernels", "numerics", "atomic", "network")),
+        ladder.species,
+        ladder.charge,
         setup.hydrogen.n_max,
         setup.hydrogen.energies,
         *ladder.kept.n.tolist(),

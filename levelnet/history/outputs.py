@@ -13,10 +13,16 @@ from .. import constants as const
 from ..arrays import FloatArray
 from ..background.conditions import Conditions
 from ..errors import Outcome, SolveError
-from ..network.assembly import Workspace, factor_interior
+from ..network.assembly import (
+    FactoredInterior,
+    Workspace,
+    factor_interior,
+    interior_photoionization,
+)
 from ..network.populations import LevelPopulations, populations
 from ..network.tabulation import TabulatedReduction
 from ..numerics.stepping import Trajectory
+from .cost import table_tolerance
 from .equations import Local, SlowEquations, ionized_and_neutral
 from .integrate import Integrated, Progress
 from .observables import Visibility, dense_growth, milestones, visibility
@@ -34,6 +40,7 @@ class _Output(NamedTuple):
 
     local: Local
     levels: LevelPopulations
+    lost_per_s: FloatArray
     relaxation_hubble: float
 
 
@@ -49,10 +56,13 @@ def assemble_history(
     reached |= integrated.redshift >= integrated.handover.redshift
     redshift = integrated.redshift[reached]
     if not len(redshift):
-        raise SolveError(trajectory.outcome.value)
+        raise SolveError(trajectory.outcome.value, outcome=trajectory.outcome)
     outputs = _outputs(integrated, redshift, tell)
     slowest = min((o.relaxation_hubble for o in outputs), default=math.inf)
-    outcome = trajectory.outcome
+    reduced, outcome = integrated.equations.reduced, trajectory.outcome
+    if outcome.ok and isinstance(reduced, TabulatedReduction):
+        if reduced.interpolation_error > table_tolerance(setup):
+            outcome = Outcome.TABLE_TOO_COARSE
     if outcome.ok and slowest < SLOW_RELAXATION:
         outcome = Outcome.QUASI_STEADY_LOST
     seen = _visibility(integrated, redshift)
@@ -107,7 +117,7 @@ def _outputs(integrated: Integrated, redshift: FloatArray, tell: Progress) -> li
         )
         levels = populations(factored, local.solution.log_population, local.conditions)
         relaxation = local.solution.slowest_relaxation() / local.conditions.hubble_rate_per_s
-        found.append(_Output(local, levels, relaxation))
+        found.append(_Output(local, levels, _lost_per_s(factored), relaxation))
         tell("level populations", (k + 1) / len(redshift))
     return found
 
@@ -139,7 +149,8 @@ def _species(integrated: Integrated, outputs: list[_Output]) -> SpeciesPopulatio
 
 def _channels(integrated: Integrated, redshift: FloatArray, outputs: list[_Output]) -> Channels:
     kept = integrated.ladder.kept
-    names = tuple(f"{n}{'sp'[l]}-1s" for n, l in zip(kept.n.tolist(), kept.l.tolist(), strict=True))
+    levels = zip(kept.n.tolist(), kept.l.tolist(), strict=True)
+    names = tuple(f"{level_name(n, l)}-1s" for n, l in levels)
     net = np.array([o.local.solution.flow for o in outputs])
     share = net / net.sum(axis=1, keepdims=True)
     cumulative = _cumulative(integrated.equations, integrated.trajectory)(-np.log1p(redshift))
@@ -172,23 +183,37 @@ def _cumulative(
 
 def _line_figures(integrated: Integrated, outputs: list[_Output]) -> LineFigures:
     lines = integrated.equations.lines
-    depth, chance, damping, crossing = [], [], [], []
+    unknown = np.full(len(lines.names), np.nan)
+    columns: list[tuple[FloatArray, ...]] = []
     for output in outputs:
         figures, conditions = output.local.coupling.validity, output.local.conditions
+        depth = figures.get("optical_depth", unknown)
         doppler = doppler_width(conditions)
-        natural = lines.decay_rate_per_s / (
-            4.0 * np.pi * doppler * lines.energy_ev / const.PLANCK_EV_S
-        )
-        depth.append(figures["optical_depth"])
-        chance.append(figures["escape_probability"])
-        damping.append(natural)
+        frequency_hz = lines.energy_ev / const.PLANCK_EV_S
+        damping = lines.decay_rate_per_s / (4.0 * np.pi * doppler * frequency_hz)
         # A Lorentz wing is thick out to a tau / pi Doppler widths, the core to sqrt(ln tau).
-        core = np.sqrt(np.log(np.maximum(figures["optical_depth"], 1.0)))
-        wing = natural * figures["optical_depth"] / np.pi
-        crossing.append(2.0 * doppler * np.maximum(core, wing))
-    return LineFigures(
-        lines.names, np.array(depth), np.array(chance), np.array(damping), np.array(crossing)
-    )
+        core = np.sqrt(np.log(np.maximum(depth, 1.0)))
+        wing = damping * depth / np.pi
+        lost = output.lost_per_s[lines.upper]
+        lost = lost / (lost + lines.einstein_a_per_s)
+        columns.append(
+            (
+                depth,
+                figures.get("escape_probability", unknown),
+                damping,
+                2.0 * doppler * np.maximum(core, wing),
+                2.0 * doppler * np.maximum(core, lost * wing),
+            )
+        )
+    return LineFigures(lines.names, *(np.array(column) for column in zip(*columns, strict=True)))
+
+
+def _lost_per_s(factored: FactoredInterior) -> FloatArray:
+    """Rate at which each kept level goes anywhere but to the ground state, s^-1."""
+    ladder = factored.ladder
+    lines = np.array([np.exp(one.log_out).sum() for one in factored.kept_lines])
+    photo = interior_photoionization(ladder, factored.radiation_temperature_k)
+    return np.asarray(lines + photo[ladder.kept_position])
 
 
 def doppler_width(conditions: Conditions) -> float:

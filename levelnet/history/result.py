@@ -85,16 +85,21 @@ class LineFigures:
         Chance that a photon of the line escapes, as the treatment has it.
     damping_parameter : ndarray, shape (n_redshift, n_lines), dimensionless
         Voigt parameter: total decay rate over 4 pi times the Doppler width.
-    crossing_time_hubble : ndarray, shape (n_redshift, n_lines), dimensionless
-        Time to redshift across the width where the line is optically thick, in Hubble times; the
-        treatment assumes it is far below 1.
+    thick_width_scattering : ndarray, shape (n_redshift, n_lines), dimensionless
+        Width over frequency in which the line is optically thick to scattering (the same number is
+        the time to redshift across it in Hubble times). Wings scatter coherently and neither make
+        nor destroy photons, so values above 1 do not by themselves spoil a treatment.
+    thick_width_absorption : ndarray, shape (n_redshift, n_lines), dimensionless
+        The same for true absorption: scattering times the chance that the excited atom goes
+        anywhere but back to the ground state. Complete redistribution asks it to be far below 1.
     """
 
     names: tuple[str, ...]
     optical_depth: FloatArray
     escape_probability: FloatArray
     damping_parameter: FloatArray
-    crossing_time_hubble: FloatArray
+    thick_width_scattering: FloatArray
+    thick_width_absorption: FloatArray
 
     def __post_init__(self) -> None:
         """Check shapes and make every array read-only."""
@@ -103,7 +108,8 @@ class LineFigures:
             "optical_depth",
             "escape_probability",
             "damping_parameter",
-            "crossing_time_hubble",
+            "thick_width_scattering",
+            "thick_width_absorption",
         ):
             frozen_array(self, name, shape)
 
@@ -269,7 +275,7 @@ class History:
     def require_converged(self) -> None:
         """Raise SolveError, carrying this history, unless the outcome is CONVERGED."""
         if not self.outcome.ok:
-            raise SolveError(self.outcome.value, self)
+            raise SolveError(self.outcome.value, self, self.outcome)
 
     def populations(self, species: str) -> FloatArray:
         """Populations per hydrogen nucleus of `species` ("H I"), shape (n_redshift, n_levels)."""

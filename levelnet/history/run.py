@@ -4,11 +4,10 @@ from __future__ import annotations
 
 import warnings
 
-from threadpoolctl import threadpool_limits
-
-from ..errors import AccuracyWarning
+from ..errors import AccuracyWarning, InputError
 from ..escape.treatment import LineTreatment
 from ..escape.two_photon import STIMULATED_NOTE
+from ..numerics.threads import one_blas_thread
 from ..pieces import Pieces
 from .cost import check_memory
 from .integrate import Progress, integrate_history
@@ -64,11 +63,14 @@ def solve(
     ----------
     Ali-Haimoud & Hirata 2010, Phys. Rev. D 82, 063521 (reduction of the network).
     """
+    if not isinstance(setup, Setup):
+        raise InputError(f"setup: a Setup is needed, not {type(setup).__name__}")
     tell = progress or (lambda stage, fraction: None)
     check_memory(setup)
-    with threadpool_limits(limits=1, user_api="blas"):
+    with one_blas_thread():
         integrated = integrate_history(setup, tell, pieces, line_treatment)
-        history = assemble_history(setup, integrated, _notes(setup), tell)
+        notes = _notes(setup, integrated.equations.treatment)
+        history = assemble_history(setup, integrated, notes, tell)
     if strict:
         history.require_converged()
     elif not history.outcome.ok:
@@ -76,19 +78,15 @@ def solve(
     return history
 
 
-def _notes(setup: Setup) -> tuple[str, ...]:
+def _notes(setup: Setup, chosen: LineTreatment) -> tuple[str, ...]:
     """What a user must know before relying on the result."""
     notes = [
         "helium is neutral and inert: x_e misses its electrons above z ~ 1600, where they count",
         "excited levels are quasi-steady; there are no collisions and no reionization",
+        f'lines: "{chosen.name}" ({type(chosen).__module__}.{type(chosen).__qualname__})',
     ]
-    if setup.lines.hydrogen == "sobolev":
-        notes.append(
-            "Sobolev lines: two-photon wings, recoil and diffusion in Lyman-alpha are left out and "
-            "change x_e by 1 to 2 per cent near z ~ 900 to 1300"
-        )
-    else:
-        notes.append(f'lines.hydrogen = "{setup.lines.hydrogen}" is a limiting case, not a model')
+    notes += [f"lines assume: {text}" for text in chosen.assumes]
+    notes += [f"lines hold for: {text}" for text in chosen.holds_for]
     if setup.lines.two_photon == "stimulated":
         notes.append(STIMULATED_NOTE)
     return tuple(notes)

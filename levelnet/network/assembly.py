@@ -16,8 +16,9 @@ from scipy import sparse
 
 from .. import constants as const
 from ..arrays import FloatArray
-from ..atomic.bound_free import recombination_weights, thermal_volume_cm3
-from ..atomic.detailed_balance import log_saha_factor
+from ..atomic.bound_free import recombination_weights
+from ..atomic.detailed_balance import log_saha_factor, thermal_volume_cm3
+from ..atomic.electron_grid import maxwell_factor
 from ..atomic.levels import ionization_scale_ev
 from ..errors import Outcome, SolveError
 from ..kernels.assembly import symmetric_blocks
@@ -151,9 +152,7 @@ def recombination_coefficients(
     ladder: Ladder, radiation_temperature_k: float, matter_temperature_k: float
 ) -> FloatArray:
     """Alpha of every level but the ground state, cm^3 s^-1, shape (n_levels,); [0] = 0."""
-    kt = const.BOLTZMANN_EV_K * matter_temperature_k
-    grid = ladder.bound_free.grid
-    spread = np.exp(-grid.energy * (ionization_scale_ev(ladder.charge) / kt))
+    spread = maxwell_factor(ladder.bound_free.grid, matter_temperature_k, ladder.charge)
     weights = recombination_weights(ladder.bound_free, radiation_temperature_k) * spread
     alpha = np.zeros(len(ladder.levels))
     for n in range(2, ladder.n_max + 1):

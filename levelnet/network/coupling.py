@@ -24,8 +24,6 @@ class GroundCoupling:
     excess_source : ndarray, shape (n_kept,), s^-1
         s less K times the Boltzmann populations at T_r over the ground state: exactly zero where
         the field outside the lines is a blackbody.
-    memory : object
-        What the treatment must remember to the next step; the network never looks inside.
     validity : mapping of str to ndarray
         Figures per line by which the treatment can be judged.
     """
@@ -35,7 +33,6 @@ class GroundCoupling:
     slope_column: FloatArray
     slope_temperature: FloatArray
     excess_source: FloatArray
-    memory: object = None
     validity: dict[str, FloatArray] = field(default_factory=dict)
 
 
@@ -44,7 +41,6 @@ def blackbody_coupling(
     slope_column: FloatArray,
     slope_temperature: FloatArray,
     boltzmann: FloatArray,
-    memory: object = None,
     validity: dict[str, FloatArray] | None = None,
 ) -> GroundCoupling:
     """Coupling of levels that each lose `loss` (a vector) into a blackbody field.
@@ -58,7 +54,6 @@ def blackbody_coupling(
         np.diag(slope_column),
         np.diag(slope_temperature),
         np.zeros_like(loss),
-        memory,
         validity or {},
     )
 

@@ -8,9 +8,15 @@ import numpy as np
 
 from .. import constants as const
 from ..arrays import FloatArray, IntArray
-from ..atomic.bound_free import thermal_volume_cm3
-from ..atomic.detailed_balance import SahaCoefficients, log_upward_ratio, saha_coefficients
+from ..atomic.detailed_balance import (
+    SahaCoefficients,
+    log_upward_ratio,
+    saha_coefficients,
+    thermal_volume_cm3,
+)
+from ..atomic.electron_grid import COLDEST_K
 from ..atomic.levels import ionization_scale_ev
+from ..errors import RangeError
 from .ladder import Ladder
 from .reduced import ReducedRates
 from .reduction import Node, Pairs
@@ -84,6 +90,11 @@ def assemble_rates(
 ) -> ReducedRates:
     """Rates from a stacked node and its derivative by ln T_r, both of shape (n_stored,)."""
     n_pairs = len(constants.lower)
+    if not matter_k >= COLDEST_K:
+        raise RangeError(
+            f"T_m = {matter_k:g} K: recombination is known down to {COLDEST_K:g} K; "
+            "end the grid at a higher redshift"
+        )
     spectrum = np.exp(value[n_pairs:]).reshape(constants.n_kept, -1)
     spectrum_slope = spectrum * slope[n_pairs:].reshape(constants.n_kept, -1)
     # Both temperatures at once: columns are T_m and T_r.

@@ -26,14 +26,17 @@ from dataclasses import dataclass
 import numpy as np
 
 from .. import constants as const
-from ..arrays import FloatArray, IntArray
+from ..arrays import BoolArray, FloatArray, IntArray
 from ..atomic.bound_free import recombination_weights
 from .assembly import FactoredInterior, Workspace, factor_interior
 from .ladder import Ladder, lines_of
 
-# Below this T_r exchange over a barrier is switched off: with {2s, 2p} kept it is below e^-900 of
-# an ordinary rate. Tables are split here.
+# Tables are split at this T_r. Below it, exchange over a high barrier leaves the doubles (with
+# {2s, 2p} kept it is e^-986 of an ordinary rate); what is left of it is the Boltzmann factor.
 WARM_K = 30.0
+# Barriers over kT up to which exchange is still computed: chances of both halves of the detour are
+# products of Boltzmann factors down to e^-600.
+_HIGHEST_BARRIER = 600.0
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -147,11 +150,15 @@ def _log_exchange(factored: FactoredInterior, pairs: Pairs, fates: FloatArray) -
         log_direct = dict(zip(lines.position.tolist(), lines.log_out.tolist(), strict=True))
         for lower, own in enumerate(ladder.kept_position.tolist()):
             log_total[upper, lower] = np.logaddexp(detour[lower], log_direct.get(own, -np.inf))
-    log_rate = log_total[pairs.upper, pairs.lower] + pairs.barrier_ev / kt
-    if factored.radiation_temperature_k < WARM_K:
-        # A detour over a barrier is below the doubles there; its place is kept by a constant.
-        log_rate[pairs.barrier_ev > 0.0] = 0.0
+    log_rate: FloatArray = log_total[pairs.upper, pairs.lower] + pairs.barrier_ev / kt
     return log_rate
+
+
+def beyond_doubles(pairs: Pairs, coldest_k: float) -> BoolArray:
+    """Pairs whose exchange leaves the doubles somewhere between `coldest_k` and WARM_K."""
+    kt = const.BOLTZMANN_EV_K * coldest_k
+    found: BoolArray = pairs.barrier_ev > _HIGHEST_BARRIER * kt
+    return found & (coldest_k < WARM_K)
 
 
 def _log_spectrum(ladder: Ladder, temperature_k: float, fates: FloatArray) -> FloatArray:

@@ -77,7 +77,8 @@ class KeptSolution:
         # Where x_B leaves the doubles, d is the population.
         population = np.exp(self.log_boltzmann) + self.departure
         if np.any(population <= 0.0):
-            raise SolveError(Outcome.NONPOSITIVE_POPULATION.value)
+            outcome = Outcome.NONPOSITIVE_POPULATION
+            raise SolveError(outcome.value, outcome=outcome)
         return np.log(population)
 
     def slowest_relaxation(self) -> float:

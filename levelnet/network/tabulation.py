@@ -9,14 +9,14 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from ..arrays import FloatArray
+from ..arrays import BoolArray, FloatArray
 from ..errors import RangeError
 from ..numerics.chebyshev import ChebyshevSeries, chebyshev_nodes
 from .assembly import Workspace
 from .ladder import Ladder
 from .rates import RateConstants, assemble_rates, largest_rate_error, rate_constants, stack
 from .reduced import KeptLevels, ReducedRates
-from .reduction import WARM_K, Pairs, exchange_pairs, reduce_at
+from .reduction import WARM_K, Pairs, beyond_doubles, exchange_pairs, reduce_at
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -44,17 +44,12 @@ class LiveReduction:
 
     def rates(self, radiation_temperature_k: float, matter_temperature_k: float) -> ReducedRates:
         """Effective rates; slopes in T_r by a fourth-order difference over 0.2 %."""
-        step = 1e-3
-        offsets = (-2.0, -1.0, 1.0, 2.0)
-        work = Workspace.of(self.ladder)
-        around = [
-            stack(
-                reduce_at(self.ladder, self.pairs, radiation_temperature_k * np.exp(k * step), work)
-            )
-            for k in offsets
-        ]
+        step, here = 1e-3, math.log(radiation_temperature_k)
+        exact = NodeSource(self.ladder, self.pairs, None, None, Workspace.of(self.ladder))
+        source = HeldSource.of(exact, radiation_temperature_k * math.exp(-2.0 * step))
+        around = [source(here + k * step) for k in (-2.0, -1.0, 1.0, 2.0)]
         slope = (around[0] - 8.0 * around[1] + 8.0 * around[2] - around[3]) / (12.0 * step)
-        value = stack(reduce_at(self.ladder, self.pairs, radiation_temperature_k, work))
+        value = source(here)
         return assemble_rates(
             self.constants, value, slope, radiation_temperature_k, matter_temperature_k
         )
@@ -143,6 +138,38 @@ class NodeSource:
         return stack(reduce_at(self.ladder, self.pairs, temperature_k, self.workspace))
 
 
+@dataclass(frozen=True, slots=True, eq=False)
+class HeldSource:
+    """Node values with those pairs held constant whose exchange leaves the doubles.
+
+    Attributes
+    ----------
+    source : NodeSource
+        Exact values.
+    held : ndarray of bool, shape (n_pairs,)
+        The pairs.
+    value : ndarray, shape (n_pairs,)
+        What they are held at: ln of rate times exp(barrier/kT) at WARM_K; it hardly changes below.
+    """
+
+    source: NodeSource
+    held: BoolArray
+    value: FloatArray
+
+    @staticmethod
+    def of(source: NodeSource, coldest_k: float) -> HeldSource:
+        """Hold what leaves the doubles between `coldest_k` and WARM_K."""
+        held = beyond_doubles(source.pairs, coldest_k)
+        edge = source(math.log(WARM_K)) if held.any() else np.zeros(len(held))
+        return HeldSource(source, held, edge[: len(held)])
+
+    def __call__(self, log_temperature: float) -> FloatArray:
+        """Stacked node values at exp(`log_temperature`) kelvin."""
+        values = self.source(log_temperature).copy()
+        values[: len(self.held)] = np.where(self.held, self.value, values[: len(self.held)])
+        return values
+
+
 def node_count(low_k: float, high_k: float, tolerance: float) -> int:
     """First guess of the number of nodes: six per e-fold of T_r for 1e-8 (measured)."""
     return math.ceil(2.0 - 0.75 * math.log10(tolerance) * math.log(high_k / low_k))
@@ -198,11 +225,12 @@ def _fit_piece(
     """One piece of the table, refined until it is good enough, with its error off the nodes."""
     # The cold end of the warm piece must not slip below WARM_K by rounding.
     low, high = math.log(low_k) * (1 + 1e-15), math.log(high_k)
-    truth = {x: source(x) for x in (low + (high - low) * part for part in _CHECKS)}
+    held = HeldSource.of(source, low_k)
+    truth = {x: held(x) for x in (low + (high - low) * part for part in _CHECKS)}
     constants = rate_constants(source.ladder, source.pairs)
     count = node_count(low_k, high_k, tolerance)
     while True:
-        values = [source(x) for x in chebyshev_nodes(low, high, count)]
+        values = [held(x) for x in chebyshev_nodes(low, high, count)]
         series = ChebyshevSeries.fit(low, high, np.array(values))
         error = max(
             largest_rate_error(constants, series.evaluate(x)[0], exact, x)

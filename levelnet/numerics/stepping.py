@@ -130,7 +130,7 @@ def integrate(  # noqa: PLR0913 (each is a choice of the caller)
     Parameters
     ----------
     rate, jacobian : callable
-        As for :func:`rosenbrock_step`; a SolveError of theirs ends the integration as SINGULAR.
+        As for :func:`rosenbrock_step`; their SolveError ends the integration with its outcome.
     start : float
         Initial time.
     state : ndarray, shape (n,)
@@ -163,15 +163,13 @@ def integrate(  # noqa: PLR0913 (each is a choice of the caller)
             # Stretch or split evenly rather than leave a sliver before the output.
             pieces = max(1, int(np.ceil((target - now) / step - 0.1)))
             trial = (target - now) / pieces
+            end = target if pieces == 1 else now + trial
             try:
-                new, error = rosenbrock_step(rate, jacobian, now, y, slope, trial)
-            except SolveError:
-                outcome = Outcome.SINGULAR
+                new, new_slope, size = _attempt(rate, jacobian, (now, end), y, slope, tolerance)
+            except SolveError as failure:
+                outcome = failure.outcome
                 break
             evaluations += 7
-            size = float(np.max(np.abs(error))) / tolerance
-            if not np.isfinite(size):
-                size = np.inf
             factor = min(_GROW, max(_SHRINK, _SAFETY * max(size, 1e-12) ** -0.25))
             if size > 1.0:
                 rejected += 1
@@ -180,10 +178,25 @@ def integrate(  # noqa: PLR0913 (each is a choice of the caller)
                     outcome = Outcome.STEP_TOO_SMALL
                 continue
             step = trial * factor if pieces > 1 or factor < 1.0 else max(step, trial * factor)
-            now = target if pieces == 1 else now + trial
-            y, slope = new, rate(now, new)
+            now, y, slope = end, new, new_slope
             times.append(now)
             states.append(y)
             if on_step is not None:
                 on_step(now)
     return Trajectory(np.array(times), np.array(states), outcome, rejected, evaluations)
+
+
+def _attempt(
+    rate: Rate,
+    jacobian: Jacobian,
+    span: tuple[float, float],
+    state: FloatArray,
+    first: FloatArray,
+    tolerance: float,
+) -> tuple[FloatArray, FloatArray, float]:
+    """One step over `span`: new state, its rate (where it is good), error over tolerance."""
+    new, error = rosenbrock_step(rate, jacobian, span[0], state, first, span[1] - span[0])
+    size = float(np.max(np.abs(error))) / tolerance
+    if not np.isfinite(size):
+        return new, first, np.inf
+    return new, rate(span[1], new) if size <= 1.0 else first, size

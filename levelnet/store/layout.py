@@ -138,7 +138,8 @@ LINES = Group(
         _by_line("optical_depth", "Sobolev optical depth"),
         _by_line("escape_probability", "chance that a photon of the line escapes"),
         _by_line("damping_parameter", "Voigt parameter, decay rate over 4 pi Doppler widths"),
-        _by_line("crossing_time_hubble", "time to cross the optically thick width, Hubble times"),
+        _by_line("thick_width_scattering", "width over frequency that is thick to scattering"),
+        _by_line("thick_width_absorption", "width over frequency that is thick to true absorption"),
     ),
 )
 

@@ -97,7 +97,7 @@ def test_kept_levels_and_the_ground_state(kept: Any, mode: str, treatment: Any) 
         reduced = live_reduction(ladder)
         for kelvin in (250.0, 1000.0, 2500.0, 6000.0):
             at = in_equilibrium(ladder, kelvin)
-            lines = treatment.couple(lyman_lines(ladder), ladder.kept, at, None, 0.0)
+            lines = treatment.couple(lyman_lines(ladder), ladder.kept, at)
             coupling = with_two_photon(lines, ladder.kept, at, 8.2246, mode)
             solution = solve_kept(ladder.kept, reduced.rates(kelvin, kelvin), coupling, at)
             # ln of x_1s and of the Saha factor are rounded at 13.6 eV / kT.
@@ -116,7 +116,7 @@ def test_a_rough_table_keeps_equilibrium() -> None:
     assert table.interpolation_error > 1e-5
     for kelvin in (400.0, 1234.0, 5000.0):
         at = in_equilibrium(ladder, kelvin)
-        lines = TREATMENTS[-1].couple(lyman_lines(ladder), ladder.kept, at, None, 0.0)
+        lines = TREATMENTS[-1].couple(lyman_lines(ladder), ladder.kept, at)
         coupling = with_two_photon(lines, ladder.kept, at, 8.2246, "spontaneous")
         solution = solve_kept(ladder.kept, table.rates(kelvin, kelvin), coupling, at)
         np.testing.assert_allclose(

@@ -36,7 +36,7 @@ STATES = {
 def coupling(
     ladder: Ladder, at: Conditions, treatment: Any = TREATMENTS[-1], mode: str = "stimulated"
 ) -> GroundCoupling:
-    lines = treatment.couple(lyman_lines(ladder), ladder.kept, at, None, 0.0)
+    lines = treatment.couple(lyman_lines(ladder), ladder.kept, at)
     return with_two_photon(lines, ladder.kept, at, 8.2246, mode)
 
 

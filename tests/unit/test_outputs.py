@@ -11,6 +11,7 @@ import pytest
 from scipy import constants as si
 from scipy.integrate import cumulative_simpson
 
+from levelnet.atomic.bound_bound import einstein_a
 from levelnet.history import outputs
 from levelnet.history.atom import build_ladder, lyman_lines
 from levelnet.history.integrate import integrate_history
@@ -156,9 +157,18 @@ def test_line_figures_from_the_formulas() -> None:
     # A Lorentz wing a/(sqrt(pi) x^2)/sqrt(pi) seen from afar has depth 1 where the photon needs to
     # cross another x = a tau/pi.
     thick = lines.damping_parameter[k, 0] * depth / math.pi
-    assert lines.crossing_time_hubble[k, 0] == pytest.approx(2.0 * doppler * thick, rel=1e-9)
-    # Lyman-alpha leaves the range of the Sobolev treatment: over a tenth of a Hubble time.
-    assert lines.crossing_time_hubble[:, 0].max() > 0.1
+    assert lines.thick_width_scattering[k, 0] == pytest.approx(2.0 * doppler * thick, rel=1e-9)
+    # Chance that 2p is excited or ionized before it falls to 1s, near 1.2e-4 at z = 1100: the
+    # stimulated 2p -> 3s, 3d, 4s, 4d alone, from A and the Planck function.
+    away = 0.0
+    for n in (3, 4):
+        photon = si.h * si.c * si.Rydberg * (0.25 - 1.0 / n**2)
+        occupation = 1.0 / math.expm1(photon / (si.k * history.radiation_temperature_k[k]))
+        for l in (0, 2):
+            away += float(einstein_a(n, l, 2, 1)) * (2 * l + 1) / 3.0 * occupation
+    ratio = lines.thick_width_absorption[k, 0] / lines.thick_width_scattering[k, 0]
+    assert ratio == pytest.approx(away / decay, rel=0.05)
+    assert 1e-4 < lines.thick_width_absorption[k, 0] < 2e-3
 
 
 def test_doppler_width() -> None:

@@ -29,7 +29,7 @@ from tests.sparse_reference import (
     exchange,
     sparse_network,
 )
-from tests.tolerances import ELIMINATION, INTERPOLATION
+from tests.tolerances import ELIMINATION, INTERPOLATION, ROUND_OFF
 
 KELVIN_PER_EV = codata.e / codata.k
 TWO = ((2, 0), (2, 1))
@@ -327,8 +327,9 @@ def test_live_reduction_is_the_exact_one() -> None:
     ladder = hydrogen_ladder(10, "measured", TWO)
     live = live_reduction(ladder)
     exact, found = exact_rates(ladder, 700.0, 300.0), live.rates(700.0, 300.0)
-    np.testing.assert_array_equal(found.recombination, exact.recombination)
-    np.testing.assert_array_equal(found.exchange, exact.exchange)
+    # The temperature goes through its logarithm: one rounding, magnified by E/kT.
+    np.testing.assert_allclose(found.recombination, exact.recombination, rtol=ROUND_OFF)
+    np.testing.assert_allclose(found.exchange, exact.exchange, rtol=20 * ROUND_OFF)
     assert live.kept is ladder.kept
 
 

@@ -10,6 +10,7 @@ import pytest
 from scipy import constants as si
 
 from levelnet.background.conditions import Conditions
+from levelnet.errors import InputError
 from levelnet.escape.treatment import (
     TREATMENTS,
     LineTreatment,
@@ -40,7 +41,7 @@ each_condition = pytest.mark.parametrize("conditions", WARM_AND_COLD)
 
 
 def couple(member: LineTreatment, c: Conditions, lines: ResonanceLines = LINES) -> GroundCoupling:
-    return member.couple(lines, KEPT, c, None, 0.0)
+    return member.couple(lines, KEPT, c)
 
 
 def boltzmann(c: Conditions) -> np.ndarray:
@@ -166,11 +167,9 @@ def test_lyman_alpha_while_the_universe_recombines() -> None:
     )
 
 
-@each_treatment
-def test_memory_is_handed_on_untouched(member: LineTreatment) -> None:
-    memory = object()
-    assert member.couple(LINES, KEPT, RECOMBINING, memory, 0.1).memory is memory
-    assert member.advance(memory, np.zeros(len(KEPT))) is memory
+def test_an_unknown_name_is_one_clear_line() -> None:
+    with pytest.raises(InputError, match=r'known are "closed", "open", "sobolev"'):
+        treatment("sideways")
 
 
 def test_base_of_the_family_has_no_escape_of_its_own() -> None:

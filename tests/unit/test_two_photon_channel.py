@@ -86,14 +86,13 @@ def test_a_closed_channel_is_no_channel() -> None:
 
 
 def test_the_channel_is_added_to_the_lines() -> None:
-    lines = Sobolev().couple(lyman_lines(LADDER), KEPT, RECOMBINING, "kept in mind", 0.0)
+    lines = Sobolev().couple(lyman_lines(LADDER), KEPT, RECOMBINING)
     before = lines.loss.copy(), lines.source.copy(), lines.slope_temperature.copy()
     decay = alone(RECOMBINING, RATE, "stimulated")
     both = with_two_photon(lines, KEPT, RECOMBINING, RATE, "stimulated")
     for name in ("loss", "source", "slope_column", "slope_temperature", "excess_source"):
         total = getattr(lines, name) + getattr(decay, name)
         np.testing.assert_allclose(getattr(both, name), total, rtol=ROUND_OFF)
-    assert both.memory == "kept in mind"
     assert set(both.validity) == {"optical_depth", "escape_probability"}
     # The lines' own record is left as it was.
     after = lines.loss, lines.source, lines.slope_temperature

@@ -12,10 +12,11 @@ import pytest
 
 from levelnet.background.adapters import with_expansion
 from levelnet.background.matter import saha_log_odds
-from levelnet.errors import AccuracyWarning, InputError, Outcome, SolveError
+from levelnet.errors import AccuracyWarning, InputError, Outcome, RangeError, SolveError
 from levelnet.escape.treatment import Closed, Sobolev
 from levelnet.history.result import History
 from levelnet.history.run import solve
+from levelnet.network import tabulation
 from tests.small_runs import COSMOLOGY, small_history, small_setup
 from tests.tolerances import HISTORY, STEPPING
 
@@ -76,7 +77,7 @@ def test_quasi_steady_state_is_lost_behind_closed_lines() -> None:
     assert history.diagnostics.slowest_relaxation_hubble < 100.0
     higher = solve(small_setup(4, 700.0, 20, lines={"hydrogen": "closed"}))
     assert higher.outcome is Outcome.CONVERGED
-    assert any("limiting case" in note for note in higher.notes)
+    assert any('lines: "closed"' in note for note in higher.notes)
 
 
 def test_two_photon_alone_and_lyman_alpha_alone_both_slow_recombination() -> None:
@@ -117,7 +118,7 @@ def test_open_lines_follow_saha_far_longer() -> None:
     expected = np.interp(1300.0, history.redshift[::-1], saha[::-1])
     found = np.interp(1300.0, trapped.redshift[::-1], trapped.free_electron_fraction[::-1])
     assert found > 1.5 * expected
-    assert any("limiting case" in note for note in history.notes)
+    assert any('lines: "open"' in note for note in history.notes)
 
 
 def test_matter_cools_adiabatically_to_well_below_a_kelvin() -> None:
@@ -304,3 +305,53 @@ def test_a_cold_background_finds_its_start() -> None:
 
 def test_no_last_scattering_where_the_grid_ends_early() -> None:
     assert math.isnan(solve(small_setup(3, 1200.0, 5)).milestones.last_scattering_redshift)
+
+
+def test_a_table_too_coarse_is_an_outcome(monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setattr(tabulation, "_MOST_NODES", 6)
+    monkeypatch.setattr(tabulation, "node_count", lambda low, high, tolerance: 6)
+    with pytest.raises(SolveError, match="could not be interpolated") as caught:
+        solve(small_setup(4), strict=True)
+    assert caught.value.outcome is Outcome.TABLE_TOO_COARSE
+
+
+def test_matter_colder_than_recombination_is_known_is_refused() -> None:
+    cold = dataclasses.replace(COSMOLOGY, cmb_temperature_k=0.1)
+    with pytest.raises(RangeError, match=r"T_m = .* K: recombination is known down to 0.02 K"):
+        solve(small_setup(4, 0.0, 20, cosmology=cold))
+
+
+def test_own_treatment_is_named_in_the_notes_and_may_keep_levels() -> None:
+    class Mine(Sobolev):
+        """Sobolev, with the n = 3 levels kept."""
+
+        name: ClassVar[str] = "mine"
+        keeps: ClassVar[tuple[tuple[int, int], ...]] = ((3, 0), (3, 1), (3, 2))
+
+    history = solve(small_setup(6), line_treatment=Mine())
+    assert any('lines: "mine"' in note and "Mine" in note for note in history.notes)
+    assert history.channels.names == ("2s-1s", "2p-1s", "3s-1s", "3p-1s", "3d-1s")
+    # Kept or eliminated, the physics is the same: only Lyman-alpha is open.
+    assert history.lines.names == ("2p-1s",)
+    plain = solve(small_setup(6))
+    np.testing.assert_allclose(
+        history.free_electron_fraction, plain.free_electron_fraction, rtol=STEPPING
+    )
+    np.testing.assert_allclose(
+        history.log_departures("H I"), plain.log_departures("H I"), rtol=0, atol=1e-4
+    )
+
+
+def test_threads_restore_the_blas_limit() -> None:
+    from concurrent.futures import ThreadPoolExecutor
+
+    from threadpoolctl import threadpool_info, threadpool_limits
+
+    with threadpool_limits(limits=2, user_api="blas"):
+        before = [pool["num_threads"] for pool in threadpool_info() if pool["user_api"] == "blas"]
+        with ThreadPoolExecutor(2) as pool:
+            first, second = pool.map(solve, [small_setup(3), small_setup(4)])
+        after = [pool["num_threads"] for pool in threadpool_info() if pool["user_api"] == "blas"]
+    assert before == after
+    assert first.outcome.ok
+    assert second.outcome.ok

@@ -237,7 +237,7 @@ def test_three_level_limit(redshift: float) -> None:
     x = 0.9 if redshift > 1300.0 else 0.1
     here = Conditions(t_r, 0.97 * t_r, density, hubble, x, x, 1.0 - x)
     rates = live_reduction(ladder).rates(t_r, 0.97 * t_r)
-    coupling = Sobolev().couple(lines, kept, here, None, 0.0)
+    coupling = Sobolev().couple(lines, kept, here)
     coupling = with_two_photon(coupling, kept, here, TWO_PHOTON, "spontaneous")
     forced = rates._replace(exchange=np.array([[0.0, 3e15], [1e15, 0.0]]))
     found = solve_kept(kept, forced, coupling, here).net_flow
