@@ -11,6 +11,7 @@ from scipy.interpolate import CubicSpline
 
 from .. import constants as const
 from ..arrays import FloatArray
+from ..atomic.levels import level_name
 from ..background.conditions import Conditions
 from ..errors import Outcome, SolveError
 from ..network.assembly import (
