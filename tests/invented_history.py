@@ -79,7 +79,7 @@ def invented_history(
         lines=LineFigures(
             lines, *(by(len(lines)) * scale for scale in (1e8, 1e-8, 1e-3, 1.0, 1e-3))
         ),
-        milestones=Milestones(1089.7, 1087.2, math.nan, 1274.3, math.nan),
+        milestones=Milestones(1089.7, 1087.2, math.nan, 1274.3, math.nan, 5.1e12),
         diagnostics=Diagnostics(1688.5, 3.1e-7, 812, 23, 4127, 40, 5.4e-10, 1.2e-14, 3.3e4),
         notes=notes,
     )

@@ -43,7 +43,7 @@ def einstein_a(
     n_lower, l_lower : array_like of int, dimensionless
         Lower level: 1 <= n_lower < n, l_lower = l - 1 or l + 1. All four broadcast.
     charge : int, dimensionless
-        Nuclear charge: 1 (hydrogen) or 2 (helium ion); also sets the reduced mass.
+        Nuclear charge, 1 (hydrogen) to 30; also sets the reduced mass.
 
     Returns
     -------
@@ -104,8 +104,8 @@ def transition_frequency(n_upper: IntArray, n_lower: IntArray) -> FloatArray:
 
 def strength_scale(charge: int = 1) -> float:
     """Return (4/3) alpha^3 Z^4 (mu/m_e) per atomic unit of time, in s^-1."""
-    scale = 4.0 / 3.0 * const.FINE_STRUCTURE**3 / const.ATOMIC_TIME_S
-    return scale * charge**4 * reduced_mass_ratio(charge)
+    scale = 4.0 / 3.0 * const.FINE_STRUCTURE**3 / const.ATOMIC_TIME_S * reduced_mass_ratio(charge)
+    return scale * charge**4
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -155,7 +155,7 @@ def dipole_blocks(n_max: int, charge: int = 1, out: FloatArray | None = None) ->
     n_max : int, dimensionless
         2 to 1000; memory is 8 n_max^3 / 3 bytes.
     charge : int, dimensionless
-        Nuclear charge, 1 or 2.
+        Nuclear charge, 1 to 30.
     out : ndarray, shape (at least n_strengths,), optional
         Contiguous buffer to write into; a reused one is several times faster than fresh memory. The
         records made from it share it.
@@ -195,6 +195,8 @@ def _scaled_starts(n_max: int, charge: int) -> FloatArray:
 
 def _whole_numbers(what: str, value: ArrayLike) -> IntArray:
     numbers = np.asarray(value)
+    if np.issubdtype(numbers.dtype, np.floating) and np.all(numbers == np.round(numbers)):
+        numbers = numbers.astype(np.int64)
     if not np.issubdtype(numbers.dtype, np.integer):
         raise InputError(f"{what}: quantum numbers must be whole numbers, not {value!r}")
     return numbers.astype(np.int64)

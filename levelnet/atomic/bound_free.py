@@ -72,7 +72,7 @@ def bound_free(n_max: int, charge: int = 1) -> BoundFree:
     n_max : int, dimensionless
         1 to 1000; memory is 400 n_max^2 bytes.
     charge : int, dimensionless
-        Nuclear charge, 1 or 2.
+        Nuclear charge, 1 to 30.
 
     References
     ----------
@@ -100,7 +100,7 @@ def photoionization_cross_section(
         Energy of relative motion of the freed electron in units of the ion's own chi, 0 (threshold)
         to 100; the photon has chi (1/n^2 + electron_energy). All arguments broadcast.
     charge : int, dimensionless
-        Nuclear charge, 1 or 2; sigma scales as charge^-2 and (m_e/mu)^2.
+        Nuclear charge, 1 to 30; sigma scales as charge^-2 and (m_e/mu)^2.
 
     Returns
     -------
@@ -237,7 +237,7 @@ def recombination_coefficient(
         Temperature of the blackbody that stimulates recombination; None: no stimulated part. All
         arguments broadcast.
     charge : int, dimensionless
-        Nuclear charge, 1 or 2.
+        Nuclear charge, 1 to 30.
     occupation : callable, optional
         Photon occupation number as a function of photon energy in eV, in place of a blackbody. It
         should be smooth in the logarithm of the electron energy.
@@ -294,7 +294,7 @@ def photoionization_rate(
     radiation_temperature_k : array_like, K
         Temperature of the blackbody, 0.02 to 1e5 K times charge^2; broadcasts against n and l.
     charge : int, dimensionless
-        Nuclear charge, 1 or 2.
+        Nuclear charge, 1 to 30.
     occupation : callable, optional
         Photon occupation number as a function of photon energy in eV, in place of a blackbody. It
         must have fallen to nothing 25 chi above the threshold and be smooth in the logarithm of
@@ -338,10 +338,21 @@ def _occupation_number(
     if radiation_temperature_k is not None and occupation is not None:
         raise InputError("give radiation_temperature_k or occupation, not both")
     if occupation is not None:
-        return np.asarray(occupation(energy_ev), float)
+        return _checked_occupation(occupation, energy_ev)
     if radiation_temperature_k is None:
         return np.zeros_like(energy_ev)
     return planck_occupation(energy_ev, radiation_temperature_k)
+
+
+def _checked_occupation(occupation: Occupation, energy_ev: FloatArray) -> FloatArray:
+    if not callable(occupation):
+        raise InputError("occupation: a function of the photon energy in eV is needed")
+    number = np.asarray(occupation(energy_ev), float)
+    if number.shape not in {(), energy_ev.shape} or not np.all((number >= 0.0) & (number < np.inf)):
+        raise InputError(
+            "occupation: must give a finite number from 0 up for each photon energy it is given"
+        )
+    return np.broadcast_to(number, energy_ev.shape)
 
 
 def _mode_rate(energy_ev: FloatArray, grid: ElectronGrid, charge: int) -> FloatArray:

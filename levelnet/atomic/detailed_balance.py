@@ -28,7 +28,7 @@ def thermal_volume_cm3(temperature_k: ArrayLike, charge: int = 1) -> FloatArray:
     temperature_k : array_like, K
         Matter temperature, above 0.
     charge : int
-        Nuclear charge, 1 or 2; it sets the reduced mass mu.
+        Nuclear charge, 1 to 30; it sets the reduced mass mu.
 
     References
     ----------
@@ -139,7 +139,7 @@ def log_saha_factor(
     temperature_k : array_like, K
         Temperature, above 0; all arguments broadcast.
     charge : int
-        Nuclear charge, 1 or 2.
+        Nuclear charge, 1 to 30.
 
     Returns
     -------

@@ -69,7 +69,7 @@ def maxwell_factor(
     matter_temperature_k : array_like, K
         0.02 to 1e5 K times charge^2.
     charge : int, dimensionless
-        Nuclear charge, 1 or 2.
+        Nuclear charge, 1 to 30.
 
     Returns
     -------

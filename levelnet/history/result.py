@@ -134,6 +134,8 @@ class Milestones:
         Where x_e = 0.5 (hydrogen).
     last_scattering_time_s : float
         Cosmic time at z_*, s.
+    transition_duration_s : float
+        Time from x_e = 0.9 to x_e = 0.1 (hydrogen), s.
     """
 
     last_scattering_redshift: float
@@ -141,6 +143,7 @@ class Milestones:
     visibility_width: float
     half_ionized_redshift: float
     last_scattering_time_s: float
+    transition_duration_s: float
 
 
 @dataclass(frozen=True, slots=True)

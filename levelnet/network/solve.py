@@ -82,8 +82,8 @@ class KeptSolution:
         return np.log(population)
 
     def slowest_relaxation(self) -> float:
-        """Smallest relaxation rate of the kept levels, s^-1."""
-        return float(np.min(np.linalg.eigvals(self.matrix).real))
+        """Smallest relaxation rate of the kept levels, s^-1; 0 where rounding hides it."""
+        return max(0.0, float(np.min(np.linalg.eigvals(self.matrix).real)))
 
 
 def log_boltzmann_populations(

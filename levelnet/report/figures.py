@@ -115,6 +115,8 @@ def _write_bytes(path: Path, data: bytes) -> None:
         os.umask(umask)
         Path(name).chmod(0o666 & ~umask)  # mkstemp makes files private; figures are for sharing
         Path(name).replace(path)
-    except BaseException:
+    except BaseException as error:
         Path(name).unlink(missing_ok=True)
+        if isinstance(error, OSError) and error.filename is None:
+            error.filename = str(path)  # a full disk does not say where
         raise

@@ -7,7 +7,6 @@ larger than what the stored bytes can hold.
 
 from __future__ import annotations
 
-import os
 from collections.abc import Iterable
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -44,8 +43,9 @@ def load(path: Path) -> Content:
     """
     import h5py
 
-    # No locks: files are only ever replaced whole, and locks fail on some network disks.
-    with h5py.File(path, "r", locking=False) as file:
+    # Through a stream of our own, without HDF5's locks: files are only ever replaced whole, locks
+    # fail on some network disks, and the file may be open in xarray in this very process.
+    with path.open("rb") as stream, h5py.File(stream, "r") as file:
         _check_kind(file, path)
         content = Content(attributes=_attributes(file, layout.ROOT_ATTRIBUTES, ""))
         known = {one.name: one for one in layout.FIXED_GROUPS}
@@ -228,4 +228,4 @@ def _text(dataset: h5py.Dataset, path: str, file: h5py.File) -> tuple[str, ...]:
 
 
 def _file_size(file: h5py.File) -> int:
-    return os.stat(file.filename).st_size
+    return int(file.id.get_filesize())

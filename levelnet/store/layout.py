@@ -171,6 +171,7 @@ MILESTONES = Group(
         _milestone("visibility_width", "1", "full width at half maximum of the visibility"),
         _milestone("half_ionized_redshift", "1", "redshift where half the hydrogen is ionized"),
         _milestone("last_scattering_time_s", "s", "cosmic time at unit optical depth"),
+        _milestone("transition_duration_s", "s", "time from x_e = 0.9 to x_e = 0.1"),
     ),
 )
 

@@ -228,8 +228,8 @@ def test_bad_block_requests() -> None:
         dipole_blocks(4, out=np.empty(3))
     with pytest.raises(InputError, match="block l = 4"):
         dipole_blocks(5).block(4)
-    with pytest.raises(InputError, match="charge = 3"):
-        einstein_a(2, 1, 1, 0, charge=3)
+    with pytest.raises(InputError, match="charge = 31"):
+        einstein_a(2, 1, 1, 0, charge=31)
 
 
 def plain(function: Any) -> Any:

@@ -26,6 +26,7 @@ MEASURED = {
     "ELECTRON_MASS_G": ("electron mass", 1e3),
     "ELECTRON_PROTON_MASS_RATIO": ("electron-proton mass ratio", 1.0),
     "ALPHA_ELECTRON_MASS_RATIO": ("alpha particle-electron mass ratio", 1.0),
+    "ELECTRON_MASS_U": ("electron mass in u", 1.0),
     "BOHR_RADIUS_CM": ("Bohr radius", 1e2),
     "ATOMIC_TIME_S": ("atomic unit of time", 1.0),
     "THOMSON_CROSS_SECTION_CM2": ("Thomson cross section", 1e4),

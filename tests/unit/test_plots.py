@@ -88,7 +88,7 @@ def made_up_history(n_max: int = 10, n_redshifts: int = 60, n_lines: int = 1) ->
         species=(SpeciesPopulations("H I", levels, np.exp(-departure) * 1e-9, departure),),
         channels=Channels(names, 1e-13 * shares.T, shares.T, shares.T),
         lines=LineFigures(names[1:], lines, lines, lines, lines, lines),
-        milestones=Milestones(PEAK, PEAK, GAUSS_FWHM * SIGMA, 1273.0, 1.2e13),
+        milestones=Milestones(PEAK, PEAK, GAUSS_FWHM * SIGMA, 1273.0, 1.2e13, 5e12),
         diagnostics=Diagnostics(1600.0, 1e-5, 200, 3, 900, 40, 1e-9, 1e-15, 1e6),
         notes=("no reionization",),
     )
@@ -193,7 +193,7 @@ def test_visibility_marks_sit_where_a_gaussian_has_them() -> None:
 
 def test_visibility_without_marks_or_peak() -> None:
     history = made_up_history()
-    nothing = Milestones(np.nan, np.nan, np.nan, np.nan, np.nan)
+    nothing = Milestones(*(np.nan,) * 6)
     (axes,) = visibility_figure(replace(history, milestones=nothing)).axes
     assert not any(one.get_text() for one in axes.texts)
     dark = replace(history, visibility=np.zeros(len(history.redshift)), milestones=nothing)

@@ -84,7 +84,7 @@ def stored(history: History, tmp_path_factory: pytest.TempPathFactory) -> Path:
 
 def test_comes_back_to_the_bit(history: History, stored: Path) -> None:
     before, after = dict(leaves(history)), dict(leaves(read(stored)))
-    assert len(before) == 49
+    assert len(before) == 50
     assert {path: bits(value) for path, value in after.items()} == {
         path: bits(value) for path, value in before.items()
     }
@@ -563,3 +563,9 @@ def test_file_changed_by_another_program(stored: Path, tmp_path: Path) -> None:
     with h5py.File(path, "r+") as file:
         file.attrs["comment"] = "mine"
     assert "changed by another program" in refuse(path) or "damaged" in refuse(path)
+
+
+def test_reads_while_xarray_has_it_open(stored: Path) -> None:
+    xarray = pytest.importorskip("xarray")
+    with xarray.open_dataset(stored, engine="h5netcdf", group="history") as held:
+        assert read(stored).redshift[0] == float(held["redshift"][0])
