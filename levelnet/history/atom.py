@@ -5,8 +5,10 @@ from __future__ import annotations
 import numpy as np
 
 from ..atomic.bound_bound import einstein_a
+from ..atomic.physics import UNCHANGED, Scales
 from ..escape.treatment import ResonanceLines
 from ..network.ladder import Ladder, hydrogen_ladder
+from ..network.reduced import KeptLevels
 from .setup import Setup
 
 
@@ -35,8 +37,25 @@ def build_ladder(setup: Setup, n_max: int | None = None) -> Ladder:
 
 def lyman_lines(ladder: Ladder) -> ResonanceLines:
     """Lyman lines from the kept np levels."""
-    upper = np.flatnonzero(ladder.kept.l == 1)
-    n = ladder.kept.n[upper]
+    return resonance_lines(ladder.kept)
+
+
+def resonance_lines(
+    kept: KeptLevels, count: int | None = None, scales: Scales = UNCHANGED
+) -> ResonanceLines:
+    """Lyman lines from kept np levels.
+
+    Parameters
+    ----------
+    kept : KeptLevels
+        The kept levels, energies already scaled.
+    count : int, optional
+        How many lines, from Lyman-alpha up; None: one from every kept np level.
+    scales : Scales, optional
+        What changed constants do to the rates.
+    """
+    upper = np.flatnonzero(kept.l == 1)[:count]
+    n = kept.n[upper]
     decay = [
         float(np.sum(einstein_a(k, 1, np.arange(1, k), 0)))
         + float(np.sum(einstein_a(k, 1, np.arange(3, k), 2)))
@@ -45,8 +64,8 @@ def lyman_lines(ladder: Ladder) -> ResonanceLines:
     return ResonanceLines(
         tuple(f"{k}p-1s" for k in n),
         upper,
-        einstein_a(n, np.ones_like(n), np.ones_like(n), np.zeros_like(n)),
-        ladder.kept.energy_ev[upper],
-        ladder.kept.statistical_weight[upper] / 2.0,
-        np.array(decay),
+        einstein_a(n, np.ones_like(n), np.ones_like(n), np.zeros_like(n)) * scales.line_rate,
+        kept.energy_ev[upper],
+        kept.statistical_weight[upper] / 2.0,
+        np.array(decay) * scales.line_rate,
     )

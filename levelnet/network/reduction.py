@@ -112,6 +112,20 @@ def reduce_at(
     ladder: Ladder, pairs: Pairs, radiation_temperature_k: float, workspace: Workspace | None = None
 ) -> Node:
     """Reduce the network at one T_r: one factorization, one right side per kept level."""
+    node = reduce_in_logarithms(ladder, pairs, radiation_temperature_k, workspace)
+    if radiation_temperature_k < WARM_K:
+        # A detour over a barrier is below the doubles there; its place is kept by a constant.
+        node.log_exchange[pairs.barrier_ev > 0.0] = 0.0
+    return node
+
+
+def reduce_in_logarithms(
+    ladder: Ladder, pairs: Pairs, radiation_temperature_k: float, workspace: Workspace | None = None
+) -> Node:
+    """As :func:`reduce_at`, with the exchange over barriers kept however cold the field.
+
+    The rates themselves leave the doubles below WARM_K; their logarithms are good.
+    """
     factored = factor_interior(ladder, radiation_temperature_k, workspace)
     fates = all_fates(factored)
     return Node(
@@ -147,11 +161,7 @@ def _log_exchange(factored: FactoredInterior, pairs: Pairs, fates: FloatArray) -
         log_direct = dict(zip(lines.position.tolist(), lines.log_out.tolist(), strict=True))
         for lower, own in enumerate(ladder.kept_position.tolist()):
             log_total[upper, lower] = np.logaddexp(detour[lower], log_direct.get(own, -np.inf))
-    log_rate = log_total[pairs.upper, pairs.lower] + pairs.barrier_ev / kt
-    if factored.radiation_temperature_k < WARM_K:
-        # A detour over a barrier is below the doubles there; its place is kept by a constant.
-        log_rate[pairs.barrier_ev > 0.0] = 0.0
-    return log_rate
+    return np.asarray(log_total[pairs.upper, pairs.lower] + pairs.barrier_ev / kt)
 
 
 def _log_spectrum(ladder: Ladder, temperature_k: float, fates: FloatArray) -> FloatArray:
