@@ -17,6 +17,10 @@ if TYPE_CHECKING:
     )
     from .atomic.two_photon import two_photon_profile, two_photon_rate
     from .background import Cosmology, from_astropy, with_expansion
+    from .distilled.build import distill
+    from .distilled.effective import EffectiveRates, effective_rates
+    from .distilled.history import history_from_table
+    from .distilled.table import EffectiveTable
     from .errors import AccuracyWarning, InputError, LevelnetError, Outcome, SolveError
     from .escape.sobolev import escape_probability
     from .history.result import History
@@ -30,15 +34,20 @@ __version__ = "0.1.0"
 _HOMES = {
     "AccuracyWarning": "errors",
     "Cosmology": "background",
+    "EffectiveRates": "distilled.effective",
+    "EffectiveTable": "distilled.table",
     "History": "history.result",
     "InputError": "errors",
     "LevelnetError": "errors",
     "Outcome": "errors",
     "Setup": "history.setup",
     "SolveError": "errors",
+    "distill": "distilled.build",
+    "effective_rates": "distilled.effective",
     "einstein_a": "atomic.bound_bound",
     "escape_probability": "escape.sobolev",
     "from_astropy": "background",
+    "history_from_table": "distilled.history",
     "load_setup": "history.setup",
     "photoionization_cross_section": "atomic.bound_free",
     "photoionization_rate": "atomic.bound_free",
@@ -54,6 +63,8 @@ _HOMES = {
 __all__ = [
     "AccuracyWarning",
     "Cosmology",
+    "EffectiveRates",
+    "EffectiveTable",
     "History",
     "InputError",
     "LevelnetError",
@@ -61,9 +72,12 @@ __all__ = [
     "Setup",
     "SolveError",
     "__version__",
+    "distill",
+    "effective_rates",
     "einstein_a",
     "escape_probability",
     "from_astropy",
+    "history_from_table",
     "load_setup",
     "photoionization_cross_section",
     "photoionization_rate",

@@ -16,7 +16,9 @@ def frozen_array(record: Any, name: str, shape: tuple[int, ...], dtype: type = n
     A frozen dataclass alone does not freeze an array; a mistake in shape is the program's, so it
     raises ValueError and not an InputError.
     """
-    values: NDArray[Any] = np.array(getattr(record, name), dtype=dtype)
+    # In C order, for sums over other strides round differently: a record that is written and read
+    # back must give the same bits.
+    values: NDArray[Any] = np.array(getattr(record, name), dtype=dtype, order="C")
     if values.shape != shape:
         raise ValueError(f"{type(record).__name__}.{name}: shape {values.shape}, expected {shape}")
     values.flags.writeable = False

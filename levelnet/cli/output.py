@@ -10,6 +10,7 @@ from typing import TYPE_CHECKING, Any
 from ..constants import SECONDS_PER_YEAR
 
 if TYPE_CHECKING:
+    from ..arrays import FloatArray
     from ..history.result import History
 
 _SAMPLES = (1700.0, 1400.0, 1300.0, 1200.0, 1100.0, 1000.0, 800.0, 500.0, 200.0, 100.0, 50.0, 20.0)
@@ -52,13 +53,18 @@ def time_text(seconds: float) -> str:
 
 def sample_rows(history: History) -> list[int]:
     """Find the outputs nearest to a few round redshifts; indices, each once, ascending."""
+    return nearest_rows(history.redshift)
+
+
+def nearest_rows(redshift: FloatArray) -> list[int]:
+    """Find the same in a descending array of redshifts."""
     import numpy as np
 
-    low, high = history.redshift[-1], history.redshift[0]
+    low, high = redshift[-1], redshift[0]
     wanted = [z for z in _SAMPLES if low <= z <= high] or [float(high)]
-    nearest = {int(np.argmin(np.abs(history.redshift - z))) for z in wanted}
+    nearest = {int(np.argmin(np.abs(redshift - z))) for z in wanted}
     # The last output is what most readers ask for.
-    return sorted(nearest | {len(history.redshift) - 1})
+    return sorted(nearest | {len(redshift) - 1})
 
 
 def history_values(history: History) -> dict[str, Any]:
@@ -99,20 +105,21 @@ def summary_text(history: History) -> str:
     n_levels = sum(len(one.levels) for one in history.species)
     head = [
         setup.title or "(no title)",
-        _row(
+        row(
             "setup",
             f"{setup.digest}: hydrogen n_max = {setup.hydrogen.n_max} ({n_levels} levels), "
             f"lines {setup.lines.hydrogen}, z = {history.redshift[0]:g} to "
             f"{history.redshift[-1]:g} ({len(history.redshift)} outputs)",
         ),
-        _row("outcome", history.outcome.value),
+        row("outcome", history.outcome.value),
         "",
     ]
     body = [*_milestone_lines(history), "", *_sample_lines(history), "", *_share_lines(history)]
     return "\n".join([*head, *body, "", *_diagnostic_lines(history), *_note_lines(history)])
 
 
-def _row(label: str, text: str) -> str:
+def row(label: str, text: str) -> str:
+    """Line of a summary."""
     return f"{label:<22}{text}"
 
 
@@ -128,7 +135,7 @@ def _milestone_lines(history: History) -> list[str]:
         ("transition", years, "{:,.0f} years", "from x_e = 0.9 to 0.1"),
     )
     return [
-        _row(label, f"{form.format(value)}  ({what})" if math.isfinite(value) else "not reached")
+        row(label, f"{form.format(value)}  ({what})" if math.isfinite(value) else "not reached")
         for label, value, form, what in lines
     ]
 
@@ -159,7 +166,7 @@ def _share_lines(history: History) -> list[str]:
     if rest:
         total = 100.0 * sum(share for _, share in rest)
         shown.append(f"{len(rest)} more {total:.3f} %")
-    return [_row("recombined through", ", ".join(shown))]
+    return [row("recombined through", ", ".join(shown))]
 
 
 def _diagnostic_lines(history: History) -> list[str]:
@@ -170,18 +177,18 @@ def _diagnostic_lines(history: History) -> list[str]:
         else "direct, no interpolation"
     )
     return [
-        _row(
+        row(
             "integration",
             f"{how.steps} steps ({how.rejected_steps} rejected), {how.evaluations} evaluations, "
             f"relative tolerance {history.setup.accuracy.relative:g}",
         ),
-        _row("reduced network", nodes),
-        _row(
+        row("reduced network", nodes),
+        row(
             "Saha hand-over",
             f"z = {how.handover_redshift:.2f}, departure {how.handover_departure:.1e}",
         ),
-        _row("conservation error", f"{how.conservation_error:.1e}"),
-        _row(
+        row("conservation error", f"{how.conservation_error:.1e}"),
+        row(
             "slowest relaxation",
             f"{how.slowest_relaxation_hubble:.3g} Hubble rates (quasi-steady needs far above 1)",
         ),
@@ -189,7 +196,7 @@ def _diagnostic_lines(history: History) -> list[str]:
 
 
 def _note_lines(history: History) -> list[str]:
-    return [_row("note", text) for text in history.notes]
+    return [row("note", text) for text in history.notes]
 
 
 def aligned(rows: Sequence[Sequence[str]], right: bool = False) -> list[str]:

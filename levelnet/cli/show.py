@@ -9,6 +9,7 @@ from typing import TYPE_CHECKING, TextIO
 
 from ..errors import InputError
 from .console import Console
+from .distill import LANGUAGES
 from .output import history_values, print_json, summary_text
 from .paths import check_folder, check_target
 
@@ -17,7 +18,10 @@ if TYPE_CHECKING:
 
 NAME = "show"
 SUMMARY = "sum up a result file; draw figures, write a table"
-DESCRIPTION = "Print the summary of a result file; write its figures or its table."
+DESCRIPTION = (
+    "Print the summary of a result file, a table of effective rates or a history made from one; "
+    "write its figures or its table."
+)
 EXAMPLE = "levelnet show result.h5 --plot figures"
 
 _BESIDE = ""  # stands for "a folder named after the file"
@@ -56,7 +60,14 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
     parser.add_argument(
         "--ascending", action="store_true", help="table with redshift ascending, not descending"
     )
-    parser.add_argument("--force", action="store_true", help="overwrite figures and table")
+    parser.add_argument(
+        "--export",
+        metavar="LANGUAGE",
+        action="append",
+        choices=LANGUAGES,
+        help="of a table of effective rates: write it beside the file as c99, fortran or csv",
+    )
+    parser.add_argument("--force", action="store_true", help="overwrite what is written")
 
 
 def run(options: argparse.Namespace, console: Console) -> int:
@@ -64,9 +75,15 @@ def run(options: argparse.Namespace, console: Console) -> int:
     _place_output(options)
     folder = _checked_places(options)
 
+    from ..history.result import History
     from ..store import read
+    from .show_table import show_distilled
 
     history = read(options.file)
+    if not isinstance(history, History):
+        return show_distilled(history, folder, options, console)
+    if options.export:
+        raise InputError("--export: writes tables of effective rates, but the file holds a history")
     written = _save_figures(history, folder, options, console)
     if options.csv == "-":
         _write_table(history, sys.stdout, options)

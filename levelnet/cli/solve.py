@@ -96,7 +96,7 @@ def compute(setup: Setup, console: Console, cache: bool) -> tuple[History, float
         console.notice(
             f"estimated: {time_text(cost.seconds)}, {size_text(cost.memory_bytes)} of memory"
         )
-    pieces = _cache(console) if cache else None
+    pieces = cache_pieces(console) if cache else None
     start = time.monotonic()
     with console.progress() as progress:
         # The outcome is reported on its own line; the library's warning would say it twice.
@@ -107,7 +107,7 @@ def compute(setup: Setup, console: Console, cache: bool) -> tuple[History, float
     return history, time.monotonic() - start
 
 
-def _cache(console: Console) -> Any:
+def cache_pieces(console: Console) -> Any:
     """Return the folder of cached rates, or None where there is no place for it."""
     from ..pieces import FolderPieces, default_cache_folder
 

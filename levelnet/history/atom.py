@@ -6,8 +6,10 @@ import numpy as np
 
 from ..atomic.bound_bound import einstein_a
 from ..atomic.levels import level_name
+from ..atomic.physics import UNCHANGED, Scales
 from ..escape.treatment import ResonanceLines
 from ..network.ladder import Ladder, hydrogen_ladder
+from ..network.reduced import KeptLevels
 from .setup import Setup
 
 
@@ -41,9 +43,26 @@ def build_ladder(
 
 def lyman_lines(ladder: Ladder, count: int | None = None) -> ResonanceLines:
     """Give the first `count` Lyman lines among the kept levels; None: all of them."""
-    highest = ladder.n_max if count is None else count + 1
-    upper = np.flatnonzero((ladder.kept.l == 1) & (ladder.kept.n <= highest))
-    n = ladder.kept.n[upper]
+    return resonance_lines(ladder.kept, count)
+
+
+def resonance_lines(
+    kept: KeptLevels, count: int | None = None, scales: Scales = UNCHANGED
+) -> ResonanceLines:
+    """Lyman lines from kept np levels.
+
+    Parameters
+    ----------
+    kept : KeptLevels
+        The kept levels, energies already scaled.
+    count : int, optional
+        How many lines, from Lyman-alpha up; None: one from every kept np level.
+    scales : Scales, optional
+        What changed constants do to the rates.
+    """
+    highest = np.inf if count is None else count + 1
+    upper = np.flatnonzero((kept.l == 1) & (kept.n <= highest))
+    n = kept.n[upper]
     decay = [
         float(np.sum(einstein_a(k, 1, np.arange(1, k), 0)))
         + float(np.sum(einstein_a(k, 1, np.arange(3, k), 2)))
@@ -52,8 +71,8 @@ def lyman_lines(ladder: Ladder, count: int | None = None) -> ResonanceLines:
     return ResonanceLines(
         tuple(f"{level_name(k, 1)}-1s" for k in n.tolist()),
         upper,
-        einstein_a(n, np.ones_like(n), np.ones_like(n), np.zeros_like(n)),
-        ladder.kept.energy_ev[upper],
-        ladder.kept.statistical_weight[upper] / 2.0,
-        np.array(decay),
+        einstein_a(n, np.ones_like(n), np.ones_like(n), np.zeros_like(n)) * scales.line_rate,
+        kept.energy_ev[upper],
+        kept.statistical_weight[upper] / 2.0,
+        np.array(decay) * scales.line_rate,
     )

@@ -57,13 +57,18 @@ def table_tolerance(setup: Setup) -> float:
     return max(0.01 * setup.accuracy.relative, 1e-11)
 
 
-def check_memory(setup: Setup) -> Cost:
-    """Estimate the cost; InputError with the figure if it cannot fit or n_max is out of range."""
+def check_memory(setup: Setup, copies: int = 1) -> Cost:
+    """Estimate the cost; InputError with the figure if it cannot fit or n_max is out of range.
+
+    With `copies` worker processes, each of which holds an atom of its own, all must fit at once.
+    """
     cost = estimate(setup)
     available = available_memory_bytes()
     n = setup.hydrogen.n_max
-    figure = f"about {_readable(cost.memory_bytes)} of memory needed"
-    if cost.memory_bytes > available:
+    needed = copies * cost.memory_bytes
+    workers = f" by {copies} workers" if copies > 1 else ""
+    figure = f"about {_readable(needed)} of memory needed{workers}"
+    if needed > available:
         raise InputError(f"hydrogen.n_max = {n}: {figure}, {_readable(available)} available")
     if n > HIGHEST_N:
         raise InputError(

@@ -20,6 +20,7 @@ from typing import NamedTuple
 import numpy as np
 
 from ..arrays import FloatArray
+from ..atomic.physics import UNCHANGED, Scales
 from ..background.conditions import Conditions
 from ..background.cosmology import Cosmology
 from ..background.matter import compton_rate_per_s
@@ -87,6 +88,9 @@ class SlowEquations:
         Spontaneous 2s-1s rate.
     two_photon_mode : str
         "spontaneous" or "stimulated".
+    scales : Scales
+        What changed constants do to Compton scattering and to Saha equilibrium; rates, energies and
+        lines above hold it already.
     """
 
     cosmology: Cosmology
@@ -95,6 +99,7 @@ class SlowEquations:
     treatment: LineTreatment
     two_photon_rate_per_s: float
     two_photon_mode: str
+    scales: Scales = UNCHANGED
 
     def background(self, log_scale: float) -> Background:
         """Background quantities at s = ln a."""
@@ -185,4 +190,4 @@ class SlowEquations:
         rate = compton_rate_per_s(
             c.radiation_temperature_k, c.electron_fraction, self.cosmology.helium_ratio()
         )
-        return float(rate) / c.hubble_rate_per_s
+        return float(rate) * self.scales.compton_rate / c.hubble_rate_per_s

@@ -9,13 +9,16 @@ from dataclasses import dataclass
 import numpy as np
 
 from ..arrays import FloatArray
+from ..atomic.physics import scales
 from ..escape.treatment import LineTreatment
 from ..escape.treatment import treatment as member
 from ..network.ladder import Ladder
+from ..network.reduced import Reduced
+from ..network.scaled import with_scales
 from ..network.tabulation import TabulatedReduction, live_reduction, node_count, tabulate
 from ..numerics.stepping import Trajectory, integrate
 from ..pieces import Pieces, code_digest, content_key
-from .atom import build_ladder, lyman_lines, open_lyman_lines
+from .atom import build_ladder, open_lyman_lines, resonance_lines
 from .cost import table_tolerance
 from .equations import SlowEquations
 from .setup import Setup
@@ -47,6 +50,8 @@ class Integrated:
         Output redshifts, descending.
     trajectory : Trajectory
         Accepted steps from the hand-over down; time is ln a.
+    measured : Reduced
+        The reduced network with the measured constants; `equations` holds it with the setup's.
     """
 
     equations: SlowEquations
@@ -54,6 +59,7 @@ class Integrated:
     handover: Handover
     redshift: FloatArray
     trajectory: Trajectory
+    measured: Reduced
 
 
 def integrate_history(
@@ -65,37 +71,54 @@ def integrate_history(
     """Integrate the slow variables of one run; see :func:`solve` for the arguments."""
     tell("atomic data", 0.0)
     chosen = line_treatment or member(setup.lines.hydrogen)
-    scout_n = min(setup.hydrogen.n_max, _SCOUT_N)
-    scout = _equations(setup, build_ladder(setup, scout_n, chosen.keeps), chosen)
-    handover = find_handover(scout, 0.1 * setup.accuracy.relative)
+    handover = setup_handover(setup, chosen)
     ladder = build_ladder(setup, keeps=chosen.keeps)
-    redshift = _output_redshifts(setup)
-    equations = _equations(setup, ladder, chosen)
+    redshift = output_redshifts(setup)
+    factor = scales(setup.physics)
+    reduced: Reduced = live_reduction(ladder)
     if setup.accuracy.interpolate:
         span = min(redshift[-1], handover.redshift), max(redshift[0], handover.redshift)
-        table = _table(setup, ladder, span, tell, pieces)
-        equations = _equations(setup, ladder, chosen, table)
-    trajectory = _integrate(setup, equations, handover, redshift, tell)
-    return Integrated(equations, ladder, handover, redshift, trajectory)
+        reduced = _table(setup, ladder, span, tell, pieces)
+    equations = slow_equations(setup, with_scales(reduced, factor), chosen)
+    trajectory = integrate_slow(setup, equations, handover, redshift, tell)
+    return Integrated(equations, ladder, handover, redshift, trajectory, reduced)
 
 
-def _equations(
-    setup: Setup,
-    ladder: Ladder,
-    chosen: LineTreatment,
-    table: TabulatedReduction | None = None,
+def setup_handover(setup: Setup, chosen: LineTreatment | None = None) -> Handover:
+    """Where a run starts: found with a small atom, since only the lowest levels matter there."""
+    keeps = () if chosen is None else chosen.keeps
+    scout = build_ladder(setup, min(setup.hydrogen.n_max, _SCOUT_N), keeps)
+    reduced = with_scales(live_reduction(scout), scales(setup.physics))
+    return find_handover(slow_equations(setup, reduced, chosen), 0.1 * setup.accuracy.relative)
+
+
+def slow_equations(
+    setup: Setup, reduced: Reduced, chosen: LineTreatment | None = None
 ) -> SlowEquations:
+    """Equations of a setup on a reduced network that already has the setup's constants.
+
+    Parameters
+    ----------
+    setup : Setup
+        Cosmology, lines, two-photon channel, constants.
+    reduced : Reduced
+        The interior of the atom; only the setup's open Lyman lines are used of its np levels.
+    chosen : LineTreatment, optional
+        In place of the one the setup names.
+    """
+    factor = scales(setup.physics)
     return SlowEquations(
         setup.cosmology,
-        table or live_reduction(ladder),
-        lyman_lines(ladder, open_lyman_lines(setup)),
-        chosen,
-        setup.hydrogen.two_photon_rate_per_s,
+        reduced,
+        resonance_lines(reduced.kept, open_lyman_lines(setup), factor),
+        chosen or member(setup.lines.hydrogen),
+        setup.hydrogen.two_photon_rate_per_s * factor.two_photon_rate,
         setup.lines.two_photon,
+        factor,
     )
 
 
-def _output_redshifts(setup: Setup) -> FloatArray:
+def output_redshifts(setup: Setup) -> FloatArray:
     """Output redshifts, descending."""
     grid = setup.grid
     if grid.redshifts is not None:
@@ -114,7 +137,8 @@ def _table(
     pieces: Pieces | None,
 ) -> TabulatedReduction:
     """Reduce the network over the whole range of T_r of the run, from store where it can."""
-    low, high = (setup.cosmology.radiation_temperature_k(float(z)) for z in span)
+    unit = scales(setup.physics).energy
+    low, high = (setup.cosmology.radiation_temperature_k(float(z)) / unit for z in span)
     # Outwards to a lattice, so that runs of one atom share their nodes whatever the universe.
     low_k = 2.0 ** (math.floor(4.0 * math.log2(float(low))) / 4.0)
     high_k = 2.0 ** (math.ceil(4.0 * math.log2(float(high))) / 4.0)
@@ -158,7 +182,7 @@ def _recall(
     return recall
 
 
-def _integrate(
+def integrate_slow(
     setup: Setup,
     equations: SlowEquations,
     handover: Handover,

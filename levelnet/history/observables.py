@@ -54,7 +54,10 @@ def dense_growth(low: float, high: float) -> FloatArray:
 
 
 def visibility(
-    cosmology: Cosmology, log_growth: FloatArray, electron_fraction: FloatArray
+    cosmology: Cosmology,
+    log_growth: FloatArray,
+    electron_fraction: FloatArray,
+    thomson: float = 1.0,
 ) -> Visibility:
     """Integrate the optical depth upwards from the lowest redshift.
 
@@ -66,6 +69,8 @@ def visibility(
         ln(1 + z), ascending and dense.
     electron_fraction : ndarray, shape (n_points,), dimensionless
         n_e/n_H there.
+    thomson : float, dimensionless
+        Thomson cross section over the measured one.
 
     References
     ----------
@@ -73,7 +78,7 @@ def visibility(
     """
     redshift = np.expm1(log_growth)
     electrons = cosmology.hydrogen_density_cm3(redshift) * electron_fraction
-    per_cm = const.THOMSON_CROSS_SECTION_CM2 * electrons
+    per_cm = thomson * const.THOMSON_CROSS_SECTION_CM2 * electrons
     per_log = per_cm * const.SPEED_OF_LIGHT_CM_S / cosmology.hubble_rate_per_s(redshift)
     depth = CubicSpline(log_growth, per_log).antiderivative()
     per_mpc = per_cm / (1.0 + redshift) * const.CM_PER_MPC

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable
+from dataclasses import replace
 from typing import NamedTuple
 
 import numpy as np
@@ -12,6 +13,7 @@ from scipy.interpolate import CubicSpline
 from .. import constants as const
 from ..arrays import FloatArray
 from ..atomic.levels import level_name
+from ..atomic.physics import Scales
 from ..background.conditions import Conditions
 from ..errors import Outcome, SolveError
 from ..network.assembly import (
@@ -113,14 +115,22 @@ def _outputs(integrated: Integrated, redshift: FloatArray, tell: Progress) -> li
     for k, z in enumerate(redshift.tolist()):
         log_scale = -math.log1p(z)
         local = equations.local(log_scale, state_at(integrated, log_scale))
-        factored = factor_interior(
-            integrated.ladder, local.conditions.radiation_temperature_k, work
-        )
-        levels = populations(factored, local.solution.log_population, local.conditions)
+        measured = _as_measured(local.conditions, equations.scales)
+        factored = factor_interior(integrated.ladder, measured.radiation_temperature_k, work)
+        levels = populations(factored, local.solution.log_population, measured)
         relaxation = local.solution.slowest_relaxation() / local.conditions.hubble_rate_per_s
         found.append(_Output(local, levels, _lost_per_s(factored), relaxation))
         tell("level populations", (k + 1) / len(redshift))
     return found
+
+
+def _as_measured(conditions: Conditions, factor: Scales) -> Conditions:
+    """Conditions under which the atom with measured constants has the same populations."""
+    return conditions._replace(
+        radiation_temperature_k=conditions.radiation_temperature_k / factor.energy,
+        matter_temperature_k=conditions.matter_temperature_k / factor.energy,
+        hydrogen_density_cm3=conditions.hydrogen_density_cm3 * factor.density,
+    )
 
 
 def _visibility(integrated: Integrated, redshift: FloatArray) -> Visibility:
@@ -137,15 +147,21 @@ def _visibility(integrated: Integrated, redshift: FloatArray) -> Visibility:
     for k in np.flatnonzero(~below):
         log_odds[k] = equilibrium_state(integrated.equations, -log_growth[k])[0][0]
     electrons = np.array([ionized_and_neutral(u)[0] for u in log_odds.tolist()])
-    return visibility(integrated.equations.cosmology, log_growth, electrons)
+    equations = integrated.equations
+    return visibility(equations.cosmology, log_growth, electrons, equations.scales.thomson)
 
 
 def _species(integrated: Integrated, outputs: list[_Output]) -> SpeciesPopulations:
     log_population = np.array([o.levels.log_population for o in outputs])
     population = np.where(log_population < _SMALLEST_LOG, 0.0, np.exp(log_population))
     log_departure = np.array([o.levels.log_departure for o in outputs])
-    ladder = integrated.ladder
-    return SpeciesPopulations(ladder.species, ladder.levels, population, log_departure)
+    ladder, unit = integrated.ladder, integrated.equations.scales.energy
+    levels = replace(
+        ladder.levels,
+        energy_ev=ladder.levels.energy_ev * unit,
+        ionization_energy_ev=ladder.levels.ionization_energy_ev * unit,
+    )
+    return SpeciesPopulations(ladder.species, levels, population, log_departure)
 
 
 def _channels(integrated: Integrated, redshift: FloatArray, outputs: list[_Output]) -> Channels:
@@ -226,7 +242,7 @@ def doppler_width(conditions: Conditions) -> float:
 
 
 def _diagnostics(integrated: Integrated, outputs: list[_Output], slowest: float) -> Diagnostics:
-    trajectory, reduced = integrated.trajectory, integrated.equations.reduced
+    trajectory, reduced = integrated.trajectory, integrated.measured
     nodes, error = 0, 0.0
     if isinstance(reduced, TabulatedReduction):
         nodes, error = reduced.n_nodes, reduced.interpolation_error

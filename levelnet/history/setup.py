@@ -11,6 +11,7 @@ from typing import Annotated, Any
 
 from pydantic import Field
 
+from ..atomic.physics import Physics
 from ..atomic.species import Helium, Hydrogen
 from ..background.cosmology import Cosmology
 from ..errors import InputError
@@ -94,6 +95,8 @@ class Setup:
         Output redshifts.
     accuracy : Accuracy, optional
         Tolerances.
+    physics : Physics, optional
+        Changed constants of nature.
     title : str, optional
         Any text; stored with the result.
 
@@ -108,6 +111,7 @@ class Setup:
     lines: Annotated[Lines, from_mapping(Lines)] = Lines()
     grid: Annotated[Grid, from_mapping(Grid)] = Grid()
     accuracy: Annotated[Accuracy, from_mapping(Accuracy)] = Accuracy()
+    physics: Annotated[Physics, from_mapping(Physics)] = Physics()
     title: str = ""
 
     def __post_init__(self) -> None:

@@ -59,9 +59,9 @@ def equilibrium_state(equations: SlowEquations, log_scale: float) -> tuple[Float
         # The network's own ionization energy, so that equilibrium is the same in both.
         kept = equations.reduced.kept
         ionization = float(kept.energy_ev[0] + kept.ionization_energy_ev[0])
-        return float(
-            saha_log_odds(around.hydrogen_density_cm3, around.radiation_temperature_k, ionization)
-        )
+        # Density counts per thermal volume, which goes as the mass of the electron to -3/2.
+        density = around.hydrogen_density_cm3 * equations.scales.reduced_mass**-1.5
+        return float(saha_log_odds(density, around.radiation_temperature_k, ionization))
 
     step = 1e-4
     drift = (saha(log_scale + step) - saha(log_scale - step)) / (2.0 * step)

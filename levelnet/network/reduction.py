@@ -150,8 +150,7 @@ def _log_exchange(factored: FactoredInterior, pairs: Pairs, fates: FloatArray) -
         log_direct = dict(zip(lines.position.tolist(), lines.log_out.tolist(), strict=True))
         for lower, own in enumerate(ladder.kept_position.tolist()):
             log_total[upper, lower] = np.logaddexp(detour[lower], log_direct.get(own, -np.inf))
-    log_rate: FloatArray = log_total[pairs.upper, pairs.lower] + pairs.barrier_ev / kt
-    return log_rate
+    return np.asarray(log_total[pairs.upper, pairs.lower] + pairs.barrier_ev / kt)
 
 
 def beyond_doubles(pairs: Pairs, coldest_k: float) -> BoolArray:

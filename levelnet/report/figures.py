@@ -79,12 +79,25 @@ def save_figures(
     OSError
         If a file cannot be written; none is left half-written.
     """
-    paths = figure_paths(folder)
+    check_place(folder, figure_paths(folder), force)
+    # Drawn in memory first, so that a figure that fails leaves nothing behind.
+    return save_drawn(make_figures(history, redshift), folder, progress)
+
+
+def check_place(folder: str | Path, paths: tuple[Path, ...], force: bool) -> None:
+    """Raise InputError if `folder` is a file, or one of `paths` exists and `force` is not set."""
     check_free(paths, force)
     if Path(folder).exists() and not Path(folder).is_dir():
         raise InputError(f"{folder}: is a file, not a folder")
-    # Drawn in memory first, so that a figure that fails leaves nothing behind.
-    figures = make_figures(history, redshift)
+
+
+def save_drawn(
+    figures: dict[str, Figure],
+    folder: str | Path,
+    progress: Callable[[str, float], None] | None = None,
+) -> tuple[Path, ...]:
+    """Write figures, by their names, as SVG and PDF; the folder is made where it is missing."""
+    paths = [Path(folder) / f"{name}.{end}" for name in figures for end in style.FORMATS]
     drawn = []
     for count, path in enumerate(paths):
         if progress is not None:
@@ -93,7 +106,7 @@ def save_figures(
     Path(folder).mkdir(parents=True, exist_ok=True)
     for path, data in zip(paths, drawn, strict=True):
         _write_bytes(path, data)
-    return paths
+    return tuple(paths)
 
 
 def check_free(paths: tuple[Path, ...], force: bool) -> None:

@@ -1,19 +1,29 @@
 """HDF5 files and text tables; the only place that imports h5py, and only when a file is opened."""
 
+from .exports import export_paths, write_export
 from .layout import LAYOUT_NAME, LAYOUT_VERSION, describe_layout
-from .read import read, read_attributes
-from .text import write_csv
+from .read import read, read_attributes, read_table
+from .table_layout import DISTILLED_LAYOUT, TABLE_LAYOUT, describe_table_layout
+from .text import write_csv, write_distilled_csv
 from .whole_file import check_output, whole_file
-from .write import write
+from .write import write, write_distilled
 
 __all__ = [
+    "DISTILLED_LAYOUT",
     "LAYOUT_NAME",
     "LAYOUT_VERSION",
+    "TABLE_LAYOUT",
     "check_output",
     "describe_layout",
+    "describe_table_layout",
+    "export_paths",
     "read",
     "read_attributes",
+    "read_table",
     "whole_file",
     "write",
     "write_csv",
+    "write_distilled",
+    "write_distilled_csv",
+    "write_export",
 ]

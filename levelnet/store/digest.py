@@ -14,7 +14,7 @@ from typing import BinaryIO
 
 import numpy as np
 
-from .layout import Content, Stored
+from .schema import Content, Stored
 
 _SEAL_START = b"\nlevelnet sha256 "
 _SEAL_LENGTH = len(_SEAL_START) + 64 + 1

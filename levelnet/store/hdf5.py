@@ -16,7 +16,7 @@ from numpy.typing import NDArray
 
 from ..errors import FileFormatError
 from . import layout
-from .layout import Content, Group, Stored, Variable
+from .schema import Content, Group, Layout, Stored, Variable, number_type
 
 if TYPE_CHECKING:
     import h5py
@@ -31,8 +31,15 @@ class Damage(Exception):
     """What is wrong with a file, for one line of text."""
 
 
-def load(path: Path) -> Content:
-    """Read everything the layout names from the HDF5 file at `path`.
+def load(path: Path, layouts: Iterable[Layout] = (layout.HISTORY_LAYOUT,)) -> Content:
+    """Read everything a layout names from the HDF5 file at `path`.
+
+    Parameters
+    ----------
+    path : Path
+        The file.
+    layouts : iterable of Layout
+        Kinds of files that are known.
 
     Raises
     ------
@@ -46,28 +53,30 @@ def load(path: Path) -> Content:
     # Through a stream of our own, without HDF5's locks: files are only ever replaced whole, locks
     # fail on some network disks, and the file may be open in xarray in this very process.
     with path.open("rb") as stream, h5py.File(stream, "r") as file:
-        _check_kind(file, path)
-        content = Content(attributes=_attributes(file, layout.ROOT_ATTRIBUTES, ""))
-        known = {one.name: one for one in layout.FIXED_GROUPS}
-        known |= {layout.SPECIES_GROUPS[s]: layout.species_group(s) for s in layout.SPECIES_GROUPS}
-        required = [one.name for one in layout.FIXED_GROUPS]
+        chosen = _layout_of(file, path, layouts)
+        content = Content(attributes=_attributes(file, chosen.attributes, ""))
+        known = {one.name: one for one in (*chosen.required, *chosen.optional)}
+        required = [one.name for one in chosen.required]
         for name in _members(file, "", known, required):
             _load_group(file, known[name], content)
     return content
 
 
-def _check_kind(file: h5py.File, path: Path) -> None:
+def _layout_of(file: h5py.File, path: Path, layouts: Iterable[Layout]) -> Layout:
     """Refuse what is not ours or too new, before anything else is looked at."""
-    if _attribute(file, "layout", "") != layout.LAYOUT_NAME:
+    name = _attribute(file, "layout", "")
+    chosen = next((one for one in layouts if one.name == name), None)
+    if chosen is None:
         raise FileFormatError(f"{path}: HDF5, but not a file of levelnet")
     found = _attribute(file, "layout_version", "")
     if not isinstance(found, int) or found < 1:
         raise Damage(f"layout_version = {found!r} is no version")
-    if found > layout.LAYOUT_VERSION:
+    if found > chosen.version:
         raise FileFormatError(
-            f"{path}: layout version {found} is newer than {layout.LAYOUT_VERSION}, the newest "
+            f"{path}: layout version {found} is newer than {chosen.version}, the newest "
             "that this levelnet reads; update levelnet"
         )
+    return chosen
 
 
 def _load_group(file: h5py.File, group: Group, content: Content) -> None:
@@ -162,7 +171,7 @@ def _check_shape(
         text = h5py.check_string_dtype(dataset.dtype)
         right_type = text is not None and text.length is None
     else:
-        right_type = dataset.dtype == layout.number_type(variable.kind)
+        right_type = dataset.dtype == number_type(variable.kind)
     if not right_type:
         raise Damage(f"{path} holds {dataset.dtype}, expected {variable.kind}")
     shape = dataset.shape

@@ -11,64 +11,13 @@ checker has confirmed one.
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field
-from typing import Any, Literal
-
-import numpy as np
-from numpy.typing import NDArray
+from .schema import Group, Kind, Layout, Variable, describe
 
 LAYOUT_NAME = "levelnet history"
 LAYOUT_VERSION = 1
 
 # Group of each species, in the order of writing.
 SPECIES_GROUPS = {"H I": "hydrogen", "He I": "helium", "He II": "helium_ion"}
-
-Kind = Literal["float64", "int64", "text"]
-
-
-@dataclass(frozen=True, slots=True)
-class Variable:
-    """One dataset: what it is called, what it holds, and which field of the record it is."""
-
-    name: str
-    dimensions: tuple[str, ...]
-    units: str
-    long_name: str
-    field: str
-    kind: Kind = "float64"
-    coordinates: str = ""
-
-    @property
-    def is_coordinate(self) -> bool:
-        """True for the variable that gives a dimension its name and values."""
-        return self.dimensions == (self.name,)
-
-    @property
-    def attributes(self) -> dict[str, str]:
-        """The attributes on disk. `units` is left out for text, which has none."""
-        given = {"long_name": self.long_name}
-        if self.kind != "text":
-            given["units"] = self.units
-        if self.coordinates:
-            # Tells xarray that the quantum numbers are coordinates of the levels (CF, section 5).
-            given["coordinates"] = self.coordinates
-        return given
-
-
-@dataclass(frozen=True, slots=True)
-class Group:
-    """One group of datasets that opens alone in xarray."""
-
-    name: str
-    description: str
-    variables: tuple[Variable, ...]
-    species: str = ""
-
-    @property
-    def attributes(self) -> dict[str, str]:
-        """The attributes on disk."""
-        given = {"description": self.description}
-        return given | {"species": self.species} if self.species else given
 
 
 def _z(name: str, units: str, long_name: str) -> Variable:
@@ -243,48 +192,21 @@ def species_group(species: str) -> Group:
     return Group(SPECIES_GROUPS[species], description, SPECIES_VARIABLES, species)
 
 
+HISTORY_LAYOUT = Layout(
+    LAYOUT_NAME,
+    LAYOUT_VERSION,
+    "a history",
+    ROOT_ATTRIBUTES,
+    FIXED_GROUPS,
+    tuple(species_group(name) for name in SPECIES_GROUPS),
+)
+
+
 def groups_of(species: tuple[str, ...]) -> tuple[Group, ...]:
     """All groups of a file with these species, in the order of writing."""
     return (HISTORY, *(species_group(name) for name in species), *FIXED_GROUPS[1:])
 
 
-@dataclass(frozen=True, slots=True, eq=False)
-class Stored:
-    """One variable as it stands in a file: text as a tuple, numbers as an array."""
-
-    dimensions: tuple[str, ...]
-    attributes: dict[str, str]
-    values: tuple[str, ...] | NDArray[Any]
-
-    @property
-    def shape(self) -> tuple[int, ...]:
-        """Lengths of the dimensions."""
-        return (len(self.values),) if isinstance(self.values, tuple) else self.values.shape
-
-
-@dataclass(slots=True, eq=False)
-class Content:
-    """All that a file says, whatever its encoding; variables and groups by their path."""
-
-    attributes: dict[str, str | int] = field(default_factory=dict)
-    groups: dict[str, dict[str, str]] = field(default_factory=dict)
-    variables: dict[str, Stored] = field(default_factory=dict)
-
-
-def number_type(kind: Kind) -> np.dtype[Any]:
-    """Return the type on disk of numbers of `kind`: little-endian on every machine."""
-    return np.dtype("<i8") if kind == "int64" else np.dtype("<f8")
-
-
 def describe_layout() -> str:
     """Return the layout as text: one line for each group, dataset and attribute of the file."""
-    lines = [f"{LAYOUT_NAME}, version {LAYOUT_VERSION}", "", "attributes of the file"]
-    lines += [f"  {name}: {text}" for name, text in ROOT_ATTRIBUTES.items()]
-    for group in groups_of(("H I",)):
-        lines += ["", f"group {group.name}: {group.description}"]
-        for one in group.variables:
-            where = f"({', '.join(one.dimensions)})" if one.dimensions else ""
-            units = "" if one.kind == "text" else f" [{one.units}]"
-            lines.append(f"  {one.kind:7s} {one.name}{where}{units}: {one.long_name}")
-    lines += ["", "after the HDF5 data: one line with the sha256 of all bytes before it"]
-    return "\n".join(lines) + "\n"
+    return describe(HISTORY_LAYOUT, groups_of(("H I",)))

@@ -1,11 +1,12 @@
-"""Read a result from HDF5: checked against layout and digest, then made into records again."""
+"""Read a file of levelnet: checked against layout and digest, then made into records again."""
 
 from __future__ import annotations
 
 import os
 import stat
+from collections.abc import Callable
 from pathlib import Path
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 from ..atomic.levels import LevelSet
 from ..errors import FileFormatError, InputError, LevelnetError, Outcome
@@ -21,22 +22,27 @@ from ..history.setup import parse_setup
 from . import layout
 from .digest import content_digest, seal_fault
 from .hdf5 import Damage, load
-from .layout import Content, Group
+from .schema import Content, Group, Layout
+from .table_layout import DISTILLED_LAYOUT, TABLE_LAYOUT
+
+if TYPE_CHECKING:
+    from ..distilled.history import FastHistory
+    from ..distilled.table import EffectiveTable
 
 _HDF5_SIGNATURE = b"\x89HDF\r\n\x1a\n"
 
 
-def read(path: str | Path) -> History:
-    """Read a history that :func:`levelnet.store.write` wrote.
+def read(path: str | Path) -> History | EffectiveTable | FastHistory:
+    """Read a history, a table of effective rates, or a history made from one.
 
     Parameters
     ----------
     path : str or Path
-        The file.
+        A file that :func:`levelnet.write` or ``levelnet history`` wrote.
 
     Returns
     -------
-    History
+    History, EffectiveTable or FastHistory
         Equal to what was written, to the bit.
 
     Raises
@@ -44,14 +50,29 @@ def read(path: str | Path) -> History:
     FileFormatError
         If the file is missing, foreign, damaged or of a newer layout; one line that names it.
     """
-    content = read_content(path)
+    return _record(path, read_content(path))
+
+
+def _record(path: str | Path, content: Content) -> History | EffectiveTable | FastHistory:
+    kind, make = _MAKERS[str(content.attributes["layout"])]
     try:
-        return history_of(content)
+        return make(content)
     except FileFormatError as error:
         raise FileFormatError(f"{path}: {error}") from None
     except (InputError, ValueError, TypeError) as error:
         # The digest was right, so the file is as written: by hand, or by another version.
-        raise FileFormatError(f"{path}: does not make a history: {_line(error)}") from error
+        raise FileFormatError(f"{path}: does not make {kind.record}: {_line(error)}") from error
+
+
+def read_table(path: str | Path) -> EffectiveTable:
+    """Read a table; FileFormatError also where the file holds something else of levelnet."""
+    content = read_content(path)
+    kind = _MAKERS[str(content.attributes["layout"])][0]
+    if kind is not TABLE_LAYOUT:
+        raise FileFormatError(f"{path}: holds {kind.record}, not {TABLE_LAYOUT.record}")
+    table: Any = _record(path, content)
+    made: EffectiveTable = table
+    return made
 
 
 def read_attributes(path: str | Path) -> dict[str, str | int]:
@@ -64,7 +85,7 @@ def read_content(path: str | Path) -> Content:
     place = Path(path)
     _check_bytes(place)
     try:
-        content = load(place)
+        content = load(place, (kind for kind, _ in _MAKERS.values()))
     except LevelnetError:
         raise
     except Damage as error:
@@ -113,12 +134,9 @@ def history_of(content: Content) -> History:
             levels = LevelSet(**own.pop("levels"))
             populations.append(SpeciesPopulations(name=group.species, levels=levels, **own))
         parts |= fields
-    outcome = str(content.attributes["outcome"])
-    if outcome not in Outcome.__members__:
-        raise FileFormatError(f'outcome "{outcome}" is not known to this levelnet')
     return History(
         setup=parse_setup(str(content.attributes["setup"]), "stored setup"),
-        outcome=Outcome[outcome],
+        outcome=_outcome(content),
         species=tuple(populations),
         channels=Channels(**parts.pop("channels")),
         lines=LineFigures(**parts.pop("lines")),
@@ -128,13 +146,60 @@ def history_of(content: Content) -> History:
     )
 
 
+def _outcome(content: Content) -> Outcome:
+    outcome = str(content.attributes["outcome"])
+    if outcome not in Outcome.__members__:
+        raise FileFormatError(f'outcome "{outcome}" is not known to this levelnet')
+    return Outcome[outcome]
+
+
+def _all_fields(content: Content, kind: Layout) -> dict[str, Any]:
+    parts: dict[str, Any] = {}
+    for group in (*kind.required, *kind.optional):
+        if group.name in content.groups:
+            parts |= _fields(content, group)
+    return parts
+
+
+def distilled_of(content: Content) -> FastHistory:
+    """Make the history that :func:`levelnet.store.write.write_distilled` took apart."""
+    from ..distilled.history import FastHistory
+    from ..distilled.observables import Observables
+
+    parts = _all_fields(content, DISTILLED_LAYOUT)
+    seen = parts.pop("observables", None)
+    return FastHistory(
+        outcome=_outcome(content),
+        observables=None if seen is None else Observables(**seen),
+        **parts,
+    )
+
+
+def table_of(content: Content) -> EffectiveTable:
+    """Make the table that :func:`levelnet.store.write.content_of` took apart."""
+    from ..distilled.certificate import Certificate
+    from ..distilled.table import EffectiveTable
+    from ..network.reduced import KeptLevels
+
+    parts = _all_fields(content, TABLE_LAYOUT)
+    kept = KeptLevels(**parts.pop("kept"))
+    if parts["equilibrium"].shape[1] != len(kept):
+        raise FileFormatError("levels: their number differs from that of the table")
+    certificate = parts.pop("certificate", None)
+    return EffectiveTable(
+        setup=parse_setup(str(content.attributes["setup"]), "stored setup"),
+        kept=kept,
+        certificate=None if certificate is None else Certificate(**certificate),
+        **parts,
+    )
+
+
 def _fields(content: Content, group: Group) -> dict[str, Any]:
     """Collect the fields of the records in one group: {"channels": {"names": ..., ...}, ...}."""
     fields: dict[str, Any] = {}
-    redshift: Any = content.variables[f"{layout.HISTORY.name}/redshift"].values
     for variable in group.variables:
         stored: Any = content.variables[f"{group.name}/{variable.name}"].values
-        if variable is layout.REDSHIFT and stored.tobytes() != redshift.tobytes():
+        if variable is layout.REDSHIFT and not _same_redshift(content, stored):
             raise FileFormatError(f"redshift of group {group.name} differs from that of history")
         *outer, name = variable.field.split(".")
         inner = fields
@@ -143,3 +208,15 @@ def _fields(content: Content, group: Group) -> dict[str, Any]:
         inner[name] = stored if not hasattr(stored, "ndim") or stored.ndim else stored.item()
     fields.pop("", None)  # the position of a level is no field
     return fields
+
+
+def _same_redshift(content: Content, stored: Any) -> bool:
+    redshift: Any = content.variables[f"{layout.HISTORY.name}/redshift"].values
+    return bool(stored.tobytes() == redshift.tobytes())
+
+
+_MAKERS: dict[str, tuple[Layout, Callable[[Content], History | EffectiveTable | FastHistory]]] = {
+    layout.LAYOUT_NAME: (layout.HISTORY_LAYOUT, history_of),
+    TABLE_LAYOUT.name: (TABLE_LAYOUT, table_of),
+    DISTILLED_LAYOUT.name: (DISTILLED_LAYOUT, distilled_of),
+}

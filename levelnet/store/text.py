@@ -4,16 +4,22 @@ from __future__ import annotations
 
 import json
 from pathlib import Path
-from typing import TextIO
+from typing import TYPE_CHECKING, TextIO
 
 import numpy as np
 
 from ..arrays import FloatArray
 from ..constants import CODATA_EDITION
 from ..history.result import History
+from ..history.setup import Setup
 from .layout import HISTORY
 from .provenance import levelnet_version
+from .schema import Variable
+from .table_layout import DISTILLED
 from .whole_file import whole_file
+
+if TYPE_CHECKING:
+    from ..distilled.history import FastHistory
 
 # A cubic spline needs four points; every second of seven rows are four.
 _FEWEST_ROWS = 7
@@ -50,7 +56,37 @@ def write_csv(
     names. The numbers follow, separated by commas, with 17 significant digits, so that reading
     gives the same doubles: ``numpy.loadtxt(path, delimiter=",")``. All characters are ASCII.
     """
-    text = table_text(history, ascending)
+    _put(table_text(history, ascending), path_or_stream, force)
+
+
+def write_distilled_csv(
+    history: FastHistory, setup: Setup, path_or_stream: str | Path | TextIO, force: bool = False
+) -> None:
+    """Write a history made from a table of effective rates; as :func:`write_csv`.
+
+    Parameters
+    ----------
+    history : FastHistory
+        What to write.
+    setup : Setup
+        The setup of the table, with the cosmology, lines and constants of this history.
+    path_or_stream : str, Path or text stream
+        A file or an open stream.
+    force : bool
+        True allows an existing file to be replaced.
+    """
+    about = [
+        f"ionization history from effective rates by levelnet {levelnet_version()}, constants of "
+        f"{CODATA_EDITION}",
+        f"title: {json.dumps(setup.title)}",
+        f"setup digest: {setup.digest}",
+        f"outcome: {history.outcome.name}: {history.outcome.value}",
+        f"{len(history.redshift)} rows, redshift descending; numbers with 17 significant digits",
+    ]
+    _put(_table(about, history, DISTILLED.variables, False), path_or_stream, force)
+
+
+def _put(text: str, path_or_stream: str | Path | TextIO, force: bool) -> None:
     if isinstance(path_or_stream, str | Path):
         with whole_file(path_or_stream, force) as raw:
             raw.write(text.encode("ascii"))
@@ -60,10 +96,19 @@ def write_csv(
 
 def table_text(history: History, ascending: bool = False) -> str:
     """Return the table of :func:`write_csv` as one string."""
-    columns = {one.name: getattr(history, one.field) for one in HISTORY.variables}
+    return _table(_what_it_is(history, ascending), history, HISTORY.variables, ascending)
+
+
+def _table(
+    about: list[str],
+    history: History | FastHistory,
+    variables: tuple[Variable, ...],
+    ascending: bool,
+) -> str:
+    columns = {one.name: getattr(history, one.field) for one in variables}
     comments = [
-        *_what_it_is(history, ascending),
-        *_column_lines(),
+        *about,
+        *_column_lines(variables),
         *_interpolation_lines(columns),
         ",".join(columns),
     ]
@@ -88,10 +133,10 @@ def _what_it_is(history: History, ascending: bool) -> list[str]:
     ]
 
 
-def _column_lines() -> list[str]:
+def _column_lines(variables: tuple[Variable, ...]) -> list[str]:
     return [
         f"column {number}: {one.name} [{one.units}]: {one.long_name.removesuffix(', descending')}"
-        for number, one in enumerate(HISTORY.variables, 1)
+        for number, one in enumerate(variables, 1)
     ]
 
 

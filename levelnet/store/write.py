@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 import os
 from collections.abc import Callable
 from operator import attrgetter
@@ -11,29 +12,37 @@ from typing import TYPE_CHECKING, Any, BinaryIO
 import numpy as np
 from numpy.typing import NDArray
 
-from ..errors import InputError
+from ..errors import InputError, Outcome
 from ..history.result import History, SpeciesPopulations
+from ..history.setup import Setup
 from . import layout
 from .digest import content_digest, seal
-from .layout import Content, Stored, Variable
 from .provenance import provenance
+from .schema import Content, Group, Layout, Stored, Variable, number_type
+from .table_layout import DISTILLED_LAYOUT, TABLE_LAYOUT
 from .whole_file import whole_file
 
 if TYPE_CHECKING:
     import h5py
+
+    from ..distilled.history import FastHistory
+    from ..distilled.table import EffectiveTable
+
+    Record = History | EffectiveTable | FastHistory
 
 # Chunks of at most 64 redshifts x 2048 levels (1 MiB), the size of HDF5's chunk cache.
 _CHUNK = (64, 2048)
 _CHUNK_ONE_DIMENSION = 16384
 
 
-def write(result: History, path: str | Path, force: bool = False) -> None:
-    """Write a history to an HDF5 file in the layout of :mod:`levelnet.store.layout`.
+def write(result: History | EffectiveTable, path: str | Path, force: bool = False) -> None:
+    """Write a history, or a table of effective rates, to an HDF5 file.
 
     Parameters
     ----------
-    result : History
-        What to store.
+    result : History or EffectiveTable
+        What to store, in the layout of :mod:`levelnet.store.layout` or
+        :mod:`levelnet.store.table_layout`.
     path : str or Path
         The file; it appears whole or not at all.
     force : bool
@@ -55,50 +64,116 @@ def write(result: History, path: str | Path, force: bool = False) -> None:
         seal(raw)
 
 
-def content_of(history: History) -> Content:
-    """Everything a file says about `history`, with the digest over all of it."""
-    content = Content(attributes=_root_attributes(history))
+def write_distilled(
+    history: FastHistory, setup: Setup, path: str | Path, force: bool = False
+) -> None:
+    """Write a history made from a table; as :func:`write`.
+
+    Parameters
+    ----------
+    history : FastHistory
+        What to store; its derivatives are left out.
+    setup : Setup
+        The setup of the table, with the cosmology, lines and constants of this history.
+    path : str or Path
+        The file; it appears whole or not at all.
+    force : bool
+        True allows an existing file to be replaced.
+    """
+    content = Content(attributes=_root_attributes(DISTILLED_LAYOUT, setup))
+    _add_outcome(content, history.outcome)
+    optional = () if history.observables is None else DISTILLED_LAYOUT.optional
+    for group in (*DISTILLED_LAYOUT.required, *optional):
+        _add_group(content, group, history, None)
+    content.attributes["digest"] = content_digest(content)
+    with whole_file(path, force) as raw:
+        save(content, raw)
+        seal(raw)
+
+
+def content_of(result: History | EffectiveTable) -> Content:
+    """Everything a file says about a record, with the digest over all of it."""
+    from ..distilled.table import EffectiveTable
+
+    if isinstance(result, History):
+        content = _history_content(result)
+    elif isinstance(result, EffectiveTable):
+        content = _table_content(result)
+    else:
+        raise InputError(
+            f"write: a {type(result).__name__} cannot be stored; a History or EffectiveTable can"
+        )
+    content.attributes["digest"] = content_digest(content)
+    return content
+
+
+def _history_content(history: History) -> Content:
+    content = Content(attributes=_root_attributes(layout.HISTORY_LAYOUT, history.setup))
+    _add_outcome(content, history.outcome)
     species = {one.name: one for one in history.species}
     unknown = sorted(set(species) - set(layout.SPECIES_GROUPS))
     if unknown or len(species) < len(history.species):
         allowed = ", ".join(layout.SPECIES_GROUPS)
         raise InputError(f"species {unknown or 'given twice'}: allowed, each once: {allowed}")
     for group in layout.groups_of(tuple(species)):
-        content.groups[group.name] = group.attributes
-        for variable in group.variables:
-            values = _values(variable, history, species.get(group.species))
-            stored = Stored(variable.dimensions, variable.attributes, values)
-            content.variables[f"{group.name}/{variable.name}"] = stored
-    content.attributes["digest"] = content_digest(content)
+        _add_group(content, group, history, species.get(group.species))
     return content
 
 
-def _root_attributes(history: History) -> dict[str, str | int]:
+def _table_content(table: EffectiveTable) -> Content:
+    content = Content(attributes=_root_attributes(TABLE_LAYOUT, table.setup))
+    optional = () if table.certificate is None else TABLE_LAYOUT.optional
+    for group in (*TABLE_LAYOUT.required, *optional):
+        _add_group(content, group, table, None)
+    return content
+
+
+def _add_outcome(content: Content, outcome: Outcome) -> None:
+    content.attributes["outcome"] = outcome.name
+    content.attributes["outcome_text"] = outcome.value
+
+
+def _root_attributes(kind: Layout, setup: Setup) -> dict[str, str | int]:
     return {
-        "layout": layout.LAYOUT_NAME,
-        "layout_version": layout.LAYOUT_VERSION,
-        "setup": history.setup.to_toml(),
-        "setup_digest": history.setup.digest,
-        "outcome": history.outcome.name,
-        "outcome_text": history.outcome.value,
+        "layout": kind.name,
+        "layout_version": kind.version,
+        "setup": setup.to_toml(),
+        "setup_digest": setup.digest,
         **provenance(),
     }
 
 
+def _add_group(
+    content: Content,
+    group: Group,
+    record: Record,
+    species: SpeciesPopulations | None,
+) -> None:
+    content.groups[group.name] = group.attributes
+    lengths: dict[str, int] = {}
+    values = {}
+    for variable in group.variables:
+        if variable.field:
+            values[variable.name] = _values(variable, record, species)
+            lengths |= zip(variable.dimensions, np.shape(values[variable.name]), strict=True)
+    for variable in group.variables:
+        # A variable that is no field counts along its dimension.
+        counted = np.arange(lengths.get(variable.name, 0), dtype=number_type("int64"))
+        stored = values.get(variable.name, counted)
+        content.variables[f"{group.name}/{variable.name}"] = Stored(
+            variable.dimensions, variable.attributes, stored
+        )
+
+
 def _values(
-    variable: Variable, history: History, species: SpeciesPopulations | None
+    variable: Variable, record: Record, species: SpeciesPopulations | None
 ) -> tuple[str, ...] | NDArray[Any]:
     """Take one variable out of the record."""
     start, _, rest = variable.field.partition(".")
-    if start == "species":
-        values = attrgetter(rest)(species)
-    elif start:
-        values = attrgetter(variable.field)(history)
-    else:
-        values = np.arange(len(species.levels) if species else 0)
+    values = attrgetter(rest)(species) if start == "species" else attrgetter(variable.field)(record)
     if variable.kind == "text":
         return tuple(values)
-    return np.asarray(values, dtype=layout.number_type(variable.kind))
+    return np.asarray(values, dtype=number_type(variable.kind))
 
 
 class _Sink:
@@ -194,7 +269,9 @@ def _storage(shape: tuple[int, ...]) -> dict[str, Any]:
     # A single number, or no number at all, cannot be cut into chunks.
     if not shape or 0 in shape:
         return {}
-    limits = (_CHUNK_ONE_DIMENSION,) if len(shape) == 1 else _CHUNK
+    limits: tuple[int, ...] = (_CHUNK_ONE_DIMENSION,) if len(shape) == 1 else _CHUNK
+    if len(shape) > len(_CHUNK):  # a series or patch per cell stays in one piece
+        limits = (max(1, math.prod(_CHUNK) // math.prod(shape[1:])), *shape[1:])
     chunks = tuple(min(length, limit) for length, limit in zip(shape, limits, strict=True))
     # The filters that every netCDF and HDF5 reader has.
     return {"chunks": chunks, "compression": "gzip", "shuffle": True, "fletcher32": True}

@@ -24,8 +24,8 @@ from hypothesis import strategies as st
 from levelnet.errors import FileFormatError
 from levelnet.store import layout, read, write
 from levelnet.store.digest import content_digest, seal
-from levelnet.store.layout import Content, Stored
 from levelnet.store.read import read_content
+from levelnet.store.schema import Content, Stored
 from tests.invented_history import invented_history
 
 ROOT = Path(__file__).resolve().parents[2]

@@ -12,6 +12,7 @@ from scipy import constants as si
 from scipy.integrate import cumulative_simpson
 
 from levelnet.atomic.bound_bound import einstein_a
+from levelnet.atomic.physics import UNCHANGED
 from levelnet.history import outputs
 from levelnet.history.atom import build_ladder, lyman_lines
 from levelnet.history.integrate import integrate_history
@@ -129,7 +130,10 @@ def test_populations_below_the_smallest_are_nothing() -> None:
             for name in ("n", "l", "statistical_weight", "energy_ev", "ionization_energy_ev")
         )
     )
-    integrated = SimpleNamespace(ladder=SimpleNamespace(species="H I", levels=four))
+    integrated = SimpleNamespace(
+        ladder=SimpleNamespace(species="H I", levels=four),
+        equations=SimpleNamespace(scales=UNCHANGED),
+    )
     found = outputs._species(integrated, [SimpleNamespace(levels=level)])  # type: ignore[arg-type]
     assert found.population[0, :2].tolist() == [0.0, 0.0]
     assert found.population[0, 2] == pytest.approx(1e-300, rel=1e-6)

@@ -14,6 +14,7 @@ import re
 import signal
 import subprocess
 import sys
+import time
 from importlib.resources import files
 from pathlib import Path
 from typing import Any
@@ -467,3 +468,197 @@ def test_every_public_name_can_be_imported() -> None:
         assert getattr(levelnet, name) is not None
     with pytest.raises(AttributeError, match="no_such_name"):
         _ = levelnet.no_such_name
+
+
+@pytest.fixture(scope="module")
+def distilled(tmp_path_factory: pytest.TempPathFactory) -> Path:
+    """Distil the small setup once, without a certificate, and return the table's file."""
+    place = tmp_path_factory.mktemp("distilled")
+    (place / "good.toml").write_text(GOOD)
+    words = ["--no-certificate", "--workers", "1", "--tolerance", "1e-6", "--quiet"]
+    assert main(["distill", str(place / "good.toml"), "-o", str(place / "t.h5"), *words]) == 0
+    return place / "t.h5"
+
+
+def test_distill_exports_beside_the_table(folder: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    words = ["--no-certificate", "--workers", "1", "--tolerance", "1e-5", "--json"]
+    exports = ["--export", "c99", "--export", "fortran", "--export", "csv"]
+    assert main(["distill", "good.toml", "-o", "my-table.h5", *words, *exports]) == 0
+    values = json.loads(capsys.readouterr().out)
+    files = ["my-table.h5", "my_table.h", "my_table.c", "my_table.f90", "my_table.csv"]
+    assert values["written"] == files
+    assert values["kept_levels"] == ["2s", "2p"]
+    assert sorted(p.name for p in folder.iterdir()) == sorted(["good.toml", *files])
+    # Nothing is written over, and the work does not even start.
+    (folder / "my-table.h5").unlink()
+    assert main(["distill", "good.toml", "-o", "my-table.h5", *words, *exports]) == 2
+    line = complaint(capsys)
+    assert "my_table.h: already exists" in line
+    assert "--force" in line
+    assert not (folder / "my-table.h5").exists()
+
+
+def test_distill_in_two_processes_gives_the_same_bytes(
+    folder: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    words = ["--no-certificate", "--no-cache", "--tolerance", "1e-4"]
+    assert main(["distill", "good.toml", "-o", "a.h5", "--workers", "1", *words]) == 0
+    assert main(["distill", "good.toml", "-o", "b.h5", "--workers", "2", *words]) == 0
+    assert Path("a.h5").read_bytes() == Path("b.h5").read_bytes()
+
+
+def test_distill_keeps_what_is_asked(folder: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    words = ["--no-certificate", "--workers", "1", "--tolerance", "1e-4", "--json"]
+    assert main(["distill", "good.toml", "--kept", "spd3", *words]) == 0
+    values = json.loads(capsys.readouterr().out)
+    assert values["kept_levels"] == ["2s", "2p", "3s", "3p", "3d"]
+    assert values["written"] == ["good-table.h5"]
+
+
+@pytest.mark.parametrize(
+    ("words", "expected"),
+    [
+        (["--kept", "2s,2q"], '"2q" is no level'),
+        (["--kept", "2s,3p"], "(2, 1) is missing"),
+        (["--kept", "2s,2p,9d"], "2 <= n <= 4"),
+        (["--tolerance", "0"], "tolerance = 0"),
+        (["--tolerance", "nan"], "tolerance = nan"),
+        (["--workers", "0"], "--workers = 0"),
+        (["-o", "good.toml", "--force"], "the file that is read"),
+    ],
+)
+def test_bad_arguments_of_distill(
+    words: list[str], expected: str, folder: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    assert main(["distill", "good.toml", "--workers", "1", *words]) == 2
+    assert expected in complaint(capsys)
+    assert [p.name for p in folder.iterdir()] == ["good.toml"]
+
+
+def test_killed_distillation_goes_on_to_the_same_bytes(folder: Path) -> None:
+    (folder / "big.toml").write_text(changed("n_max = 4", "n_max = 40"))
+    words = ["distill", "big.toml", "--no-certificate", "--workers", "1", "--tolerance", "1e-4"]
+    cache = folder / "pieces"
+    given = {**environment(), "LEVELNET_CACHE": str(cache)}
+    start = [sys.executable, "-m", "levelnet", *words]
+    first = subprocess.Popen([*start, "-o", "a.h5"], cwd=folder, env=given)
+    kept: list[Path] = []
+    deadline = time.monotonic() + 60.0
+    while time.monotonic() < deadline and first.poll() is None and len(kept) < 6:
+        kept = list(cache.glob("*")) if cache.exists() else []
+        time.sleep(0.01)
+    first.kill()
+    first.wait()
+    assert kept
+    assert not (folder / "a.h5").exists(), "ended before it could be killed"
+    ages = {path: path.stat().st_mtime_ns for path in kept if path.exists()}
+    subprocess.run([*start, "-o", "b.h5"], cwd=folder, env=given, check=True, capture_output=True)
+    assert all(path.stat().st_mtime_ns == age for path, age in ages.items())
+    fresh = [*start, "-o", "c.h5", "--no-cache"]
+    subprocess.run(fresh, cwd=folder, env=environment(), check=True, capture_output=True)
+    assert (folder / "b.h5").read_bytes() == (folder / "c.h5").read_bytes()
+
+
+def test_history_from_a_table(
+    distilled: Path, solved: Path, folder: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    assert main(["history", str(distilled), "--setup", "good.toml", "-o", "h.csv", "--json"]) == 0
+    values = json.loads(capsys.readouterr().out)
+    assert values["ok"] is True
+    assert values["written"] == ["h.csv"]
+    full = levelnet.read(solved)
+    found = np.array(values["history"]["free_electron_fraction"])
+    assert np.max(np.abs(found / full.free_electron_fraction - 1.0)) < 1e-5
+    assert np.loadtxt("h.csv", delimiter=",").shape == (30, 6)
+    assert main(["history", str(distilled), "-o", "h.h5"]) == 0
+    assert len(levelnet.read("h.h5").redshift) == 2000
+    text = capsys.readouterr().out
+    assert "z_* (tau = 1)" in text
+    assert main(["show", "h.h5"]) == 0
+    assert "x_e" in capsys.readouterr().out
+
+
+def test_history_of_other_parameters(
+    distilled: Path, folder: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    words = ["history", str(distilled), "--redshifts", "1100", "900", "--json"]
+    found = []
+    for more in ([], ["--baryon-density-h2", "0.03"], ["--fine-structure-change", "0.01"]):
+        assert main([*words, *more]) == 0
+        given = json.loads(capsys.readouterr().out)["history"]
+        assert given["redshift"] == [1100.0, 900.0]
+        found.append(given["free_electron_fraction"][0])
+    # More baryons recombine sooner; a tighter atom recombines sooner.
+    assert found[1] < found[0]
+    assert found[2] < found[0]
+    assert main(["history", str(distilled), "--redshifts", "1100", "900", "-o", "-"]) == 0
+    printed = capsys.readouterr().out
+    rows = np.loadtxt(printed.splitlines(), delimiter=",")
+    assert rows[0, 1] == found[0]
+
+
+@pytest.mark.parametrize(
+    ("words", "expected"),
+    [
+        (["--redshifts", "9000", "100"], "outside the table; it holds 25 to 9000 K"),
+        (["--redshifts", "100", "1"], "outside the table"),
+        (["--redshifts", "nan", "100"], "finite"),
+        (["--baryon-density-h2", "0"], "baryon_density_h2 = 0.0"),
+        (["--hubble-km-s-mpc", "-70"], "hubble_km_s_mpc = -70.0"),
+        (["--setup", "good.toml", "--hubble-km-s-mpc", "70"], "--setup"),
+        (["--setup", "none.toml"], "none.toml"),
+        (["--setup", "other.toml"], "hydrogen.n_max = 5"),
+        (["-o", "-", "--json"], "--json"),
+        (["-o", "none/h.csv"], "none"),
+    ],
+)
+def test_bad_arguments_of_history(
+    words: list[str],
+    expected: str,
+    distilled: Path,
+    folder: Path,
+    capsys: pytest.CaptureFixture[str],
+) -> None:
+    (folder / "other.toml").write_text(changed("n_max = 4", "n_max = 5"))
+    assert main(["history", str(distilled), *words]) == 2
+    assert expected in complaint(capsys)
+    assert sorted(p.name for p in folder.iterdir()) == ["good.toml", "other.toml"]
+
+
+def test_what_is_no_table_is_refused(
+    distilled: Path, solved: Path, folder: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    assert main(["history", str(solved)]) == 2
+    assert "holds a history, not a table" in complaint(capsys)
+    data = distilled.read_bytes()
+    Path("cut.h5").write_bytes(data[: len(data) // 2])
+    with h5py.File("foreign.h5", "w") as file:
+        file["x"] = np.arange(3)
+    for name in ("cut.h5", "foreign.h5", "none.h5", "good.toml"):
+        for command in ("history", "show"):
+            assert main([command, name]) == 2
+            assert name in complaint(capsys)
+
+
+def test_show_table(
+    distilled: Path, solved: Path, folder: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    assert main(["show", str(distilled), "--json"]) == 0
+    values = json.loads(capsys.readouterr().out)
+    assert values["radiation_temperature_range_k"] == pytest.approx([25.0, 9000.0])
+    assert values["certificate"] is None
+    table = str(folder / "t.h5")
+    Path(table).write_bytes(distilled.read_bytes())
+    assert main(["show", table, "--plot", "figures", "--export", "c99"]) == 0
+    assert "2s, 2p" in capsys.readouterr().out
+    assert sorted(p.name for p in Path("figures").iterdir()) == ["rates.pdf", "rates.svg"]
+    assert Path("t.c").exists()
+    for words, expected in (
+        (["--csv", "x.csv"], "--export csv"),
+        (["--redshift", "1000", "--plot"], "--redshift"),
+        (["--export", "c99"], "already exists"),
+    ):
+        assert main(["show", table, *words]) == 2
+        assert expected in complaint(capsys)
+    assert main(["show", str(solved), "--export", "c99"]) == 2
+    assert "holds a history" in complaint(capsys)

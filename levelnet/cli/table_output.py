@@ -1,0 +1,176 @@
+"""Tables of effective rates and their histories as text for people and as values for JSON."""
+
+from __future__ import annotations
+
+import math
+from typing import TYPE_CHECKING, Any
+
+from .output import aligned, row
+
+if TYPE_CHECKING:
+    from ..distilled.history import FastHistory
+    from ..distilled.table import EffectiveTable
+    from ..history.setup import Setup
+
+_SAMPLES_K = (9000.0, 6000.0, 4000.0, 3000.0, 2000.0, 1000.0, 300.0, 100.0, 30.0)
+
+
+def table_values(table: EffectiveTable) -> dict[str, Any]:
+    """Collect what the summary of a table shows."""
+    import numpy as np
+
+    from ..distilled.about import level_names
+
+    setup, proof = table.setup, table.certificate
+    values: dict[str, Any] = {
+        "title": setup.title,
+        "setup_digest": setup.digest,
+        "hydrogen_n_max": setup.hydrogen.n_max,
+        "kept_levels": level_names(table.kept),
+        "tolerance": table.tolerance,
+        "radiation_temperature_range_k": list(table.radiation_range_k),
+        "temperature_ratio_range": [math.exp(table.ratio_low), math.exp(table.ratio_high)],
+        "cells": list(table.departure.shape[:2]),
+        "n_coefficients": sum(a.size for a in (table.equilibrium, table.exchange, table.departure)),
+        "certificate": None,
+    }
+    if proof is not None:
+        errors = np.abs(proof.history_error)
+        values["certificate"] = {
+            "n_points": proof.n_points,
+            "largest_error": dict(zip(proof.rate_names, proof.largest_error, strict=True)),
+            "rms_error": dict(zip(proof.rate_names, proof.rms_error, strict=True)),
+            "largest_history_error": {
+                name: float(np.nanmax(one)) if np.any(np.isfinite(one)) else math.nan
+                for name, one in zip(proof.cosmologies, errors, strict=True)
+            },
+        }
+    return values
+
+
+def table_summary(table: EffectiveTable) -> str:
+    """Return the summary of a table as lines of plain text."""
+    values = table_values(table)
+    low, high = values["radiation_temperature_range_k"]
+    least, most = values["temperature_ratio_range"]
+    n_x, n_y = values["cells"]
+    lines = [
+        table.setup.title or "(no title)",
+        row(
+            "effective rates",
+            f"setup {values['setup_digest']}: hydrogen n_max = {values['hydrogen_n_max']}, kept "
+            + ", ".join(values["kept_levels"]),
+        ),
+        row("range", f"T_r = {low:g} to {high:g} K, T_m/T_r = {least:g} to {most:g}"),
+        row(
+            "size",
+            f"{n_x} x {n_y} cells, {values['n_coefficients']} coefficients, tolerance "
+            f"{table.tolerance:g} in each logarithm",
+        ),
+        "",
+        *_rate_lines(table),
+        "",
+        *_certificate_lines(values["certificate"]),
+    ]
+    return "\n".join(lines)
+
+
+def _rate_lines(table: EffectiveTable) -> list[str]:
+    """Logarithms to base ten at a few temperatures, T_m = T_r."""
+    import numpy as np
+
+    from ..distilled.about import level_names
+
+    low, high = table.radiation_range_k
+    wanted = np.array([t for t in _SAMPLES_K if low <= t <= high] or [high])
+    rates = table.effective_rates(wanted, wanted)
+    names = level_names(table.kept)[:3]
+    head = ("T_r = T_m (K)", *(f"log A_{name}" for name in names), *(f"log B_{n}" for n in names))
+    numbers = [rates.log_recombination[:, : len(names)], rates.log_photoionization[:, : len(names)]]
+    body = [
+        (f"{kelvin:g}", *(f"{value:.4f}" for value in line))
+        for kelvin, line in zip(wanted, np.hstack(numbers) / math.log(10.0), strict=True)
+    ]
+    return aligned([head, *body], right=True)
+
+
+def _certificate_lines(proof: dict[str, Any] | None) -> list[str]:
+    if proof is None:
+        return [row("certificate", "none; the errors were not measured")]
+    worst = max(proof["largest_error"], key=lambda name: proof["largest_error"][name])
+    lines = [
+        row(
+            "certificate",
+            f"largest error of a logarithm {proof['largest_error'][worst]:.1e} ({worst}), at "
+            f"{proof['n_points']} random points",
+        )
+    ]
+    for name, error in proof["largest_history_error"].items():
+        figure = f"{error:.1e}" if math.isfinite(error) else "not known"
+        lines.append(row("error of x_e", f"{figure} against the full network ({name})"))
+    return lines
+
+
+def distilled_values(history: FastHistory, setup: Setup | None) -> dict[str, Any]:
+    """Collect a history made from a table, whole."""
+    seen = history.observables
+    given: dict[str, Any] = {} if setup is None else {"setup_digest": setup.digest}
+    return given | {
+        "outcome": history.outcome.name,
+        "ok": history.outcome.ok,
+        "start_redshift": history.start_redshift,
+        "n_steps": history.n_steps,
+        "n_rejected": history.n_rejected,
+        "observables": None
+        if seen is None
+        else {
+            "last_scattering_redshift": seen.last_scattering_redshift,
+            "sound_horizon_mpc": seen.sound_horizon_mpc,
+            "damping_per_mpc": seen.damping_per_mpc,
+        },
+        "history": {
+            "redshift": history.redshift,
+            "free_electron_fraction": history.free_electron_fraction,
+            "neutral_hydrogen_fraction": history.neutral_hydrogen_fraction,
+            "matter_temperature_k": history.matter_temperature_k,
+            "radiation_temperature_k": history.radiation_temperature_k,
+        },
+    }
+
+
+def distilled_summary(history: FastHistory) -> str:
+    """Return the summary of a history made from a table as lines of plain text."""
+    from .output import nearest_rows
+
+    seen = history.observables
+    lines = [row("outcome", history.outcome.value)]
+    if seen is not None:
+        for label, value, form in (
+            ("z_* (tau = 1)", seen.last_scattering_redshift, "{:.3f}"),
+            ("sound horizon r_s", seen.sound_horizon_mpc, "{:.3f} Mpc (comoving)"),
+            ("damping k_D", seen.damping_per_mpc, "{:.6f} per Mpc (comoving)"),
+        ):
+            lines.append(row(label, form.format(value) if math.isfinite(value) else "not reached"))
+    head = ("z", "x_e", "x_HI", "T_m (K)", "T_r (K)")
+    body = [
+        (
+            f"{history.redshift[k]:.2f}",
+            f"{history.free_electron_fraction[k]:.6e}",
+            f"{history.neutral_hydrogen_fraction[k]:.6e}",
+            f"{history.matter_temperature_k[k]:.6g}",
+            f"{history.radiation_temperature_k[k]:.6g}",
+        )
+        for k in nearest_rows(history.redshift)
+    ]
+    steps = (
+        f"{history.n_steps} steps ({history.n_rejected} rejected), from Saha equilibrium at z = "
+    )
+    return "\n".join(
+        [
+            *lines,
+            "",
+            *aligned([head, *body], right=True),
+            "",
+            row("integration", f"{steps}{history.start_redshift:.2f}"),
+        ]
+    )

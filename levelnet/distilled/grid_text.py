@@ -1,0 +1,162 @@
+"""A table of effective rates as comma-separated text: logarithms on a regular grid.
+
+A grid, because every language has a cubic spline, while coefficients of patches would have to be
+programmed anew; who needs the coefficients takes the C or Fortran source.
+"""
+
+from __future__ import annotations
+
+import math
+from typing import NamedTuple
+
+import numpy as np
+
+from ..arrays import FloatArray
+from .about import about_lines, level_names, pair_names
+from .effective import NEVER
+from .table import COLLISIONS_K, EffectiveTable
+
+# So that the spline errs by little more than the table at its default tolerance.
+_ROWS, _RATIOS = 241, 97
+
+
+class Grid(NamedTuple):
+    """Logarithms on a grid, even in x = ln(T_r/K) and y = ln(T_m/T_r).
+
+    Attributes
+    ----------
+    x, y : ndarray, shapes (n_x,) and (n_y,), dimensionless
+        The grid.
+    recombination : ndarray, shape (n_x, n_y, n_kept)
+        ln of A_i in cm^3 s^-1.
+    others : ndarray, shape (n_x, n_others)
+        ln of photoionization times exp(I/kT_r) and of downward exchange times exp(barrier/kT_r),
+        in s^-1, since a spline cannot follow a Boltzmann factor; -inf for no exchange at all.
+    """
+
+    x: FloatArray
+    y: FloatArray
+    recombination: FloatArray
+    others: FloatArray
+
+
+def table_grid(table: EffectiveTable, x: FloatArray, y: FloatArray) -> Grid:
+    """Evaluate a table on a grid inside its rectangle of ln T_r and ln(T_m/T_r).
+
+    The rectangle is filled to its corner, where matter is hotter than the table allows, because a
+    spline needs it whole; the figures there are those of an atom without collisions.
+    """
+    # Past the check of `effective_rates`, which refuses the hot corner.
+    here = table._series(*np.meshgrid(x - math.log(table.scales.energy), y, indexing="ij"))
+    unit = table.scales
+    recombination = here.equilibrium + y[:, None] * here.departure + math.log(unit.recombination)
+    temperature = np.exp(x)[:, None]
+    saha, reduced_k = table.saha, temperature / unit.energy
+    photo = here.equilibrium[:, 0] - saha.log_factor(reduced_k) + saha.ionization_k / reduced_k
+    down = np.where(here.exchange[:, 0] > NEVER + 1.0, here.exchange[:, 0], -np.inf)
+    others = np.concatenate([photo, down], axis=1) + math.log(unit.line_rate)
+    return Grid(x, y, recombination, others)
+
+
+def grid_text(table: EffectiveTable, n_x: int = _ROWS, n_y: int = _RATIOS) -> str:
+    """Return a table as comma-separated text, comment lines first.
+
+    Parameters
+    ----------
+    table : EffectiveTable
+        The table.
+    n_x, n_y : int, at least 8
+        Points in ln T_r and in ln(T_m/T_r).
+    """
+    low, high = np.log(table.radiation_range_k)
+    x = np.linspace(low, high, n_x)
+    grid = table_grid(table, x, np.linspace(table.ratio_low, table.ratio_high, n_y))
+    blocks = [grid.others]
+    blocks += [grid.recombination[:, :, k] for k in range(len(table.kept))]
+    head = [*about_lines(table), "", *_explanation(table, grid), "", ",".join(_names(table, grid))]
+    lines = [f"# {line}".rstrip() for line in head]
+    lines += [
+        f"{x:.17g}," + ",".join(f"{value:.12g}" for value in row)
+        for x, row in zip(grid.x, np.hstack(blocks), strict=True)
+    ]
+    return "\n".join(lines) + "\n"
+
+
+def _others(table: EffectiveTable) -> list[tuple[str, str]]:
+    """Name and meaning of each column that depends on T_r alone."""
+    unit = table.scales.energy
+    ionization = table.saha.ionization_k * unit
+    told = [
+        (f"ln_photoionization_{name}", f"photoionization of {name}", f"exp({depth:.17g}/T_r)")
+        for name, depth in zip(level_names(table.kept), ionization, strict=True)
+    ]
+    for names, barrier in zip(pair_names(table), table.barrier_k * unit, strict=True):
+        lower, upper = names.split("-")
+        told.append(
+            (
+                f"ln_exchange_{upper}_to_{lower}",
+                f"rate from {upper} to {lower}",
+                f"exp({barrier:.17g}/T_r)",
+            )
+        )
+    return [(name, f"ln of {what} in 1/s, times {factor}") for name, what, factor in told]
+
+
+def _upward(table: EffectiveTable) -> list[str]:
+    rows = zip(pair_names(table), table.log_weight_ratio, table.rise_k, strict=True)
+    return [
+        f"ln of rate {name.replace('-', ' to ')} = ln of the rate down + {weights:.17g} - "
+        f"{rise * table.scales.energy:.17g}/T_r"
+        for name, weights, rise in rows
+    ]
+
+
+def _names(table: EffectiveTable, grid: Grid) -> list[str]:
+    ratios = [f"{ratio:.6g}" for ratio in np.exp(grid.y)]
+    captures = [
+        f"ln_recombination_{name}_at_{ratio}"
+        for name in level_names(table.kept)
+        for ratio in ratios
+    ]
+    return ["ln_radiation_temperature", *(name for name, _ in _others(table)), *captures]
+
+
+def _explanation(table: EffectiveTable, grid: Grid) -> list[str]:
+    n_x, n_y, _ = grid.recombination.shape
+    first = grid.others.shape[1] + 2
+    lines = [
+        f"{n_x} rows, one for each radiation temperature T_r (K), even in ln T_r; lines that start",
+        "with # are comments, the last of them names the columns. Natural logarithms throughout.",
+        "Column 1 has 17 significant digits, the others have 12.",
+        "column 1: ln T_r",
+    ]
+    lines += [f"column {number}: {what}" for number, (_, what) in enumerate(_others(table), 2)]
+    for k, name in enumerate(level_names(table.kept)):
+        start = first + k * n_y
+        lines.append(
+            f"columns {start} to {start + n_y - 1}: ln of recombination into {name} in cm^3/s, "
+            f"{n_y} values of T_m/T_r"
+        )
+    step = (grid.y[-1] - grid.y[0]) / (n_y - 1)
+    lines += [
+        *_upward(table),
+        f"values of T_m/T_r: exp({grid.y[0]:.17g} + k {step:.17g}), k = 0 to {n_y - 1}",
+        f"matter above {COLLISIONS_K * table.scales.energy:g} K and above T_r: there to fill the",
+        "  rectangle for splines, not to be used; collisional ionization is left out",
+        "interpolation rule: cubic spline (not-a-knot ends) in ln T_r and ln(T_m/T_r); nothing",
+        "  outside. Largest error of the logarithms, measured half-way between the grid points",
+        f"  against the table: {spline_error(table, grid):.1e}",
+    ]
+    return lines
+
+
+def spline_error(table: EffectiveTable, grid: Grid) -> float:
+    """Largest error of the logarithms from the spline, half-way between the points of a grid."""
+    from scipy.interpolate import CubicSpline
+
+    truth = table_grid(table, 0.5 * (grid.x[1:] + grid.x[:-1]), 0.5 * (grid.y[1:] + grid.y[:-1]))
+    between = CubicSpline(grid.y, CubicSpline(grid.x, grid.recombination)(truth.x), axis=1)
+    errors = [between(truth.y) - truth.recombination]
+    known = np.isfinite(grid.others).all(axis=0)
+    errors.append(CubicSpline(grid.x, grid.others[:, known])(truth.x) - truth.others[:, known])
+    return max(float(np.max(np.abs(one), initial=0.0)) for one in errors)

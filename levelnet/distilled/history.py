@@ -1,0 +1,378 @@
+"""One history from a table, in a millisecond, with its exact derivatives."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Mapping
+from dataclasses import dataclass
+from typing import NamedTuple
+
+import numpy as np
+from numpy.typing import ArrayLike
+
+from ..arrays import FloatArray, frozen_array
+from ..atomic.physics import Physics, scales
+from ..background.cosmology import Cosmology
+from ..errors import InputError, Outcome, RangeError, SolveError
+from ..escape.lines import Lines
+from ..kernels.effective import (
+    NO_START,
+    OUT_OF_RANGE,
+    STEP_TOO_SMALL,
+    TOO_MANY_STEPS,
+    Atom,
+    effective_history,
+)
+from .observables import Observables, Quadrature, observe, quadrature
+from .prepared import choose_physics, make_atom, rate_names, scale_factors
+from .table import EffectiveTable
+from .universe import CONSTANTS, COSMOLOGICAL, make_drive, make_universe
+
+# Local error allowed in a step over the error asked of x_e; with it x_e was measured to a quarter.
+_LOCAL = 2.0
+# Derivatives follow the computed history, so their error is a few times its own.
+_LOCAL_SENSITIVE = 0.5
+# The start carries the first-order lag behind equilibrium; what it leaves out is the square of it.
+_START = 0.1
+_FIRST_STEP, _MAX_STEPS = 1e-3, 20_000
+_TIGHTEST, _LOOSEST = 1e-11, 1e-3
+_COUNT = 2000
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Sensitivities:
+    """Derivatives of a history by its parameters; the last axis of each array is the parameter.
+
+    Attributes
+    ----------
+    parameters : tuple of str
+        The six of the cosmology (per unit of each), "fine_structure_change" and
+        "electron_mass_change" (per unit relative change), then "ln recombination_2s", ...: per unit
+        of the ln of a factor on the rate of that name, see :func:`rate_names`. Of the cosmology,
+        what is not varied is held; dark energy closes the budget; a tabulated expansion does not
+        move.
+    free_electron_fraction : ndarray, shape (n_redshift, n_parameters)
+        Of x_e at fixed redshift.
+    matter_temperature_k : ndarray, shape (n_redshift, n_parameters), K per unit
+        Of T_m.
+    last_scattering_redshift, sound_horizon_mpc, damping_per_mpc : ndarray, shape (n_parameters,)
+        Of z_*, r_s and k_D.
+    """
+
+    parameters: tuple[str, ...]
+    free_electron_fraction: FloatArray
+    matter_temperature_k: FloatArray
+    last_scattering_redshift: FloatArray
+    sound_horizon_mpc: FloatArray
+    damping_per_mpc: FloatArray
+
+    def __post_init__(self) -> None:
+        """Check shapes and make every array read-only."""
+        n = len(self.parameters)
+        for name in ("free_electron_fraction", "matter_temperature_k"):
+            frozen_array(self, name, (len(self.free_electron_fraction), n))
+        for name in ("last_scattering_redshift", "sound_horizon_mpc", "damping_per_mpc"):
+            frozen_array(self, name, (n,))
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class FastHistory:
+    """A history from a table; arrays of shape (n_redshift,) over descending redshift.
+
+    Attributes
+    ----------
+    outcome : Outcome
+        How it ended.
+    redshift : ndarray, dimensionless
+        As asked, descending.
+    free_electron_fraction, ionized_hydrogen_fraction, neutral_hydrogen_fraction : ndarray
+        n_e, n_HII and n_HI over n_H.
+    matter_temperature_k, radiation_temperature_k : ndarray, K
+        T_m and T_r.
+    start_redshift : float
+        Where Saha equilibrium was left.
+    n_steps, n_rejected : int
+        Accepted and rejected steps.
+    observables : Observables or None
+        z_*, r_s and k_D, where derivatives or they were asked for.
+    sensitivities : Sensitivities or None
+        Derivatives, where asked for.
+    """
+
+    outcome: Outcome
+    redshift: FloatArray
+    free_electron_fraction: FloatArray
+    ionized_hydrogen_fraction: FloatArray
+    neutral_hydrogen_fraction: FloatArray
+    matter_temperature_k: FloatArray
+    radiation_temperature_k: FloatArray
+    start_redshift: float
+    n_steps: int
+    n_rejected: int
+    observables: Observables | None = None
+    sensitivities: Sensitivities | None = None
+
+    def __post_init__(self) -> None:
+        """Check shapes and make every array read-only."""
+        for name in (
+            "redshift",
+            "free_electron_fraction",
+            "ionized_hydrogen_fraction",
+            "neutral_hydrogen_fraction",
+            "matter_temperature_k",
+            "radiation_temperature_k",
+        ):
+            frozen_array(self, name, (len(self.redshift),))
+
+
+class Run(NamedTuple):
+    """What the kernel gave.
+
+    Attributes
+    ----------
+    state : ndarray, shape (n, 2)
+        u = ln(x_HII/x_HI) and v = ln(T_m/T_r).
+    slope : ndarray, shape (n, 2 n_parameters)
+        Their derivatives, u first.
+    grid_state, grid_slope : ndarray
+        The same at the points of the observables.
+    report : ndarray
+        As :func:`levelnet.kernels.effective.effective_history`.
+    """
+
+    state: FloatArray
+    slope: FloatArray
+    grid_state: FloatArray
+    grid_slope: FloatArray
+    report: FloatArray
+
+
+def history_from_table(  # noqa: PLR0913 (each is a choice of the caller)
+    table: EffectiveTable,
+    cosmology: Cosmology,
+    *,
+    redshifts: ArrayLike | None = None,
+    lines: Lines | None = None,
+    two_photon_rate_per_s: float | None = None,
+    relative: float = 1e-6,
+    sensitivities: bool = False,
+    observables: bool = False,
+    rate_scales: Mapping[str, float] | None = None,
+    fine_structure_change: float | None = None,
+    electron_mass_change: float | None = None,
+) -> FastHistory:
+    """Compute the history of one cosmology from a table of effective rates.
+
+    Parameters
+    ----------
+    table : EffectiveTable
+        From :func:`levelnet.distill`.
+    cosmology : Cosmology
+        Any; it need not be the table's.
+    redshifts : array_like, dimensionless, optional
+        Output redshifts in any order, at least two different ones, with T_r inside the table;
+        None: 2000, evenly spaced in ln(1 + z), over the grid of the table's setup.
+    lines : Lines, optional
+        Line treatment; None: the table's. Every open Lyman line must start from a kept level.
+    two_photon_rate_per_s : float, s^-1, optional
+        2s-1s decay rate before any change of constants; None: the table's.
+    relative : float, 1e-11 to 1e-3
+        Error of x_e from stepping and interpolation.
+    sensitivities : bool
+        Also give the exact derivatives of everything, z_*, r_s and k_D among them.
+    observables : bool
+        Also give z_*, r_s and k_D.
+    rate_scales : mapping of str to float, optional
+        Factors on effective rates, named as :func:`rate_names` names them.
+    fine_structure_change, electron_mass_change : float, -0.2 to 0.2, optional
+        Relative changes of constants; None: those of the table.
+
+    Returns
+    -------
+    FastHistory
+        Fractions and temperatures at every output, descending in redshift.
+
+    Raises
+    ------
+    InputError
+        For arguments out of range, lines that do not close on the kept levels, redshifts the table
+        does not hold (RangeError), or hydrogen that is nowhere in Saha equilibrium inside it.
+    SolveError
+        If the integration did not reach the last redshift.
+
+    Notes
+    -----
+    The equations, the start and the step method are those of :func:`levelnet.solve`. Derivatives
+    solve the variational equation along the computed history; they are no differences. Helium is
+    neutral; there is no reionization. Safe in threads.
+
+    References
+    ----------
+    Ali-Haimoud & Hirata 2010, Phys. Rev. D 82, 063521 (effective multilevel atom); Hairer & Wanner
+    1996, Solving Ordinary Differential Equations II (Rosenbrock and Radau methods).
+    """
+    if not _TIGHTEST <= relative <= _LOOSEST:
+        raise InputError(f"relative = {relative:g}: allowed are {_TIGHTEST:g} to {_LOOSEST:g}")
+    physics = choose_physics(table, fine_structure_change, electron_mass_change)
+    factors = scale_factors(table, rate_scales)
+    atom = make_atom(table, lines, two_photon_rate_per_s, physics, factors)
+    redshift = _redshifts(table, redshifts)
+    _check_range(atom, cosmology, redshift)
+    drive = _drive(table, cosmology, physics) if sensitivities else None
+    outputs = -np.log1p(redshift)
+    grid = quadrature(atom, cosmology, outputs[-1]) if observables or sensitivities else None
+    run = _run(atom, cosmology, outputs, grid, drive, relative)
+    if grid is None:
+        return _assemble(cosmology, redshift, run, None, None)
+    seen, slopes = observe(
+        cosmology, grid, run.grid_state, run.grid_slope, drive, scales(physics).thomson
+    )
+    if drive is None:
+        return _assemble(cosmology, redshift, run, seen, None)
+    names = (*COSMOLOGICAL, *CONSTANTS, *(f"ln {name}" for name in rate_names(table)))
+    found = _sensitivities(cosmology, redshift, run, drive, names, slopes)
+    return _assemble(cosmology, redshift, run, seen, found)
+
+
+def _redshifts(table: EffectiveTable, asked: ArrayLike | None) -> FloatArray:
+    """Output redshifts, descending."""
+    if asked is None:
+        grid = table.setup.grid
+        ends = math.log1p(grid.redshift_start), math.log1p(grid.redshift_end)
+        redshift = np.expm1(np.linspace(*ends, _COUNT))
+        redshift[[0, -1]] = grid.redshift_start, grid.redshift_end
+        return redshift
+    redshift = np.array(asked, dtype=float)
+    if redshift.ndim != 1 or not np.all(np.isfinite(redshift)):
+        raise InputError("redshifts: a plain sequence of finite numbers is needed")
+    if np.any(redshift[1:] >= redshift[:-1]):
+        redshift = np.unique(redshift)[::-1]
+    if len(redshift) < 2:
+        raise InputError("redshifts: at least two different values are needed")
+    return np.ascontiguousarray(redshift)
+
+
+def _check_range(atom: Atom, cosmology: Cosmology, redshift: FloatArray) -> None:
+    """RangeError where the table does not hold T_r."""
+    today = cosmology.cmb_temperature_k
+    low, high = (math.exp(float(x + atom.constants[1])) for x in atom.span[:2])
+    for z in (float(redshift[0]), float(redshift[-1])):
+        radiation_k = today * (1.0 + z)
+        if z < 0.0 or not low * (1.0 - 1e-12) <= radiation_k <= high * (1.0 + 1e-12):
+            raise RangeError(
+                f"redshifts: {z:g}: T_r = {radiation_k:g} K is outside the table; it holds "
+                f"{low:g} to {high:g} K, redshifts {max(0.0, low / today - 1.0):.5g} to "
+                f"{high / today - 1.0:.5g}"
+            )
+
+
+def _drive(table: EffectiveTable, cosmology: Cosmology, physics: Physics) -> FloatArray:
+    changes = physics.fine_structure_change, physics.electron_mass_change
+    return make_drive(cosmology, scales(physics), changes, len(rate_names(table)))
+
+
+def _run(
+    atom: Atom,
+    cosmology: Cosmology,
+    s: FloatArray,
+    grid: Quadrature | None,
+    drive: FloatArray | None,
+    relative: float,
+) -> Run:
+    """Call the kernel; SolveError or InputError where it did not reach the end."""
+    # From the hottest place a start may be looked for down to the end.
+    first = math.log(cosmology.cmb_temperature_k) - float(atom.span[1] + atom.constants[1])
+    universe = make_universe(cosmology, min(first, float(s[0])), float(s[-1]), drive)
+    points = np.empty(0) if grid is None else grid.points
+    n = 2 * len(universe.drive)
+    run = Run(
+        np.empty((len(s), 2)),
+        np.empty((len(s), n)),
+        np.empty((len(points), 2)),
+        np.empty((len(points), n)),
+        np.zeros(6),
+    )
+    status = effective_history(
+        atom,
+        universe,
+        s,
+        points,
+        math.sqrt(_START * relative),
+        (_LOCAL if drive is None else _LOCAL_SENSITIVE) * relative,
+        _FIRST_STEP,
+        _MAX_STEPS,
+        *run,
+    )
+    if status:
+        _complain(status, atom, run.report)
+    return run
+
+
+def _complain(status: int, atom: Atom, report: FloatArray) -> None:
+    if status == NO_START:
+        top = math.exp(float(atom.span[1] + atom.constants[1]))
+        raise InputError(
+            "lines, two_photon_rate_per_s: hydrogen is not in Saha equilibrium anywhere below "
+            f"T_r = {top:g} K, the end of the table, to the accuracy asked"
+        )
+    reached = math.expm1(-float(report[4]))
+    if status == OUT_OF_RANGE:
+        low, high = (math.exp(float(y)) for y in atom.span[2:])
+        raise RangeError(
+            f"T_m/T_r leaves the table below redshift {reached:g}; it holds {low:g} to {high:g}"
+        )
+    outcome = {TOO_MANY_STEPS: Outcome.STEP_LIMIT, STEP_TOO_SMALL: Outcome.STEP_TOO_SMALL}[status]
+    raise SolveError(f"{outcome.value} (redshift {reached:g})")
+
+
+def fractions(log_odds: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """x_HII and x_HI (dimensionless) from u, each to full relative precision."""
+    small = np.exp(-np.abs(log_odds))
+    large = 1.0 / (1.0 + small)
+    small *= large
+    hot = log_odds > 0.0
+    return np.where(hot, large, small), np.where(hot, small, large)
+
+
+def _assemble(
+    cosmology: Cosmology,
+    redshift: FloatArray,
+    run: Run,
+    seen: Observables | None,
+    found: Sensitivities | None,
+) -> FastHistory:
+    ionized, neutral = fractions(run.state[:, 0])
+    radiation = cosmology.cmb_temperature_k * (1.0 + redshift)
+    return FastHistory(
+        Outcome.CONVERGED,
+        redshift,
+        ionized,
+        ionized,
+        neutral,
+        radiation * np.exp(run.state[:, 1]),
+        radiation,
+        math.expm1(-float(run.report[0])),
+        int(run.report[2]),
+        int(run.report[3]),
+        seen,
+        found,
+    )
+
+
+def _sensitivities(
+    cosmology: Cosmology,
+    redshift: FloatArray,
+    run: Run,
+    drive: FloatArray,
+    names: tuple[str, ...],
+    slopes: FloatArray,
+) -> Sensitivities:
+    n = len(drive)
+    ionized, neutral = fractions(run.state[:, 0])
+    matter = cosmology.cmb_temperature_k * (1.0 + redshift) * np.exp(run.state[:, 1])
+    return Sensitivities(
+        names,
+        (ionized * neutral)[:, None] * run.slope[:, :n],
+        matter[:, None] * (run.slope[:, n:] + drive[:, 0]),
+        *slopes,
+    )

@@ -1,0 +1,61 @@
+"""Which levels a distilled network keeps."""
+
+from __future__ import annotations
+
+from collections.abc import Iterable
+
+from ..errors import InputError
+from ..history.atom import open_lyman_lines
+from ..history.setup import Setup
+
+KeptChoice = tuple[tuple[int, int], ...]
+
+
+def needed_levels(setup: Setup) -> KeptChoice:
+    """2s, 2p and every np whose Lyman line is open: the levels that talk to the ground state."""
+    return ((2, 0), *((n, 1) for n in range(2, open_lyman_lines(setup) + 2)))
+
+
+def choose_kept(setup: Setup, kept: Iterable[tuple[int, int]] | None) -> KeptChoice:
+    """Check a choice of kept levels.
+
+    Parameters
+    ----------
+    setup : Setup
+        The run; its open Lyman lines say which levels must be kept.
+    kept : iterable of (n, l), or None
+        Levels to keep; None: those needed.
+
+    Returns
+    -------
+    tuple of (n, l)
+        Sorted by n, then l.
+
+    Raises
+    ------
+    InputError
+        If a level does not exist in the setup's atom, or one that is needed is missing: what is
+        eliminated cannot talk to the ground state.
+    """
+    needed = needed_levels(setup)
+    if kept is None:
+        return tuple(sorted(needed))
+    n_max = setup.hydrogen.n_max
+    try:
+        chosen = {(int(n), int(l)) for n, l in kept}
+    except (TypeError, ValueError):
+        raise InputError("kept: give pairs of whole numbers (n, l)") from None
+    bad = sorted(level for level in chosen if not 2 <= level[0] <= n_max or not _l_fits(level))
+    if bad:
+        raise InputError(f"kept = {bad[0]}: allowed are (n, l) with 2 <= n <= {n_max}, 0 <= l < n")
+    missing = sorted(set(needed) - chosen)
+    if missing:
+        raise InputError(
+            f"kept: (n, l) = {missing[0]} is missing; 2s, 2p and every np with an open Lyman line "
+            "must be kept"
+        )
+    return tuple(sorted(chosen))
+
+
+def _l_fits(level: tuple[int, int]) -> bool:
+    return 0 <= level[1] < level[0]
