@@ -19,7 +19,9 @@ if TYPE_CHECKING:
     from .background import Cosmology, from_astropy, with_expansion
     from .distilled.build import distill
     from .distilled.effective import EffectiveRates, effective_rates
-    from .distilled.history import history_from_table
+    from .distilled.ensemble import Ensemble, ensemble
+    from .distilled.history import FastHistory, history_from_table
+    from .distilled.local import LocalRates, rate_of_change
     from .distilled.table import EffectiveTable
     from .errors import AccuracyWarning, InputError, LevelnetError, Outcome, SolveError
     from .escape.sobolev import escape_probability
@@ -36,21 +38,26 @@ _HOMES = {
     "Cosmology": "background",
     "EffectiveRates": "distilled.effective",
     "EffectiveTable": "distilled.table",
+    "Ensemble": "distilled.ensemble",
+    "FastHistory": "distilled.history",
     "History": "history.result",
     "InputError": "errors",
     "LevelnetError": "errors",
+    "LocalRates": "distilled.local",
     "Outcome": "errors",
     "Setup": "history.setup",
     "SolveError": "errors",
     "distill": "distilled.build",
     "effective_rates": "distilled.effective",
     "einstein_a": "atomic.bound_bound",
+    "ensemble": "distilled.ensemble",
     "escape_probability": "escape.sobolev",
     "from_astropy": "background",
     "history_from_table": "distilled.history",
     "load_setup": "history.setup",
     "photoionization_cross_section": "atomic.bound_free",
     "photoionization_rate": "atomic.bound_free",
+    "rate_of_change": "distilled.local",
     "read": "store.read",
     "recombination_coefficient": "atomic.bound_free",
     "solve": "history.run",
@@ -65,9 +72,12 @@ __all__ = [
     "Cosmology",
     "EffectiveRates",
     "EffectiveTable",
+    "Ensemble",
+    "FastHistory",
     "History",
     "InputError",
     "LevelnetError",
+    "LocalRates",
     "Outcome",
     "Setup",
     "SolveError",
@@ -75,12 +85,14 @@ __all__ = [
     "distill",
     "effective_rates",
     "einstein_a",
+    "ensemble",
     "escape_probability",
     "from_astropy",
     "history_from_table",
     "load_setup",
     "photoionization_cross_section",
     "photoionization_rate",
+    "rate_of_change",
     "read",
     "recombination_coefficient",
     "solve",

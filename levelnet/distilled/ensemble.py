@@ -26,7 +26,7 @@ class Ensemble:
 
     Attributes
     ----------
-    redshift : ndarray, shape (n_redshift,)
+    redshift : ndarray, shape (n_redshift,), dimensionless
         Output redshifts, descending.
     free_electron_fraction, matter_temperature_k : ndarray, shape (n_cosmologies, n_redshift)
         x_e (dimensionless) and T_m (K).
@@ -58,7 +58,7 @@ def ensemble(
     executor : concurrent.futures.Executor, optional
         Threads suffice: the kernel releases the interpreter's lock. Processes get the table once
         with every eight cosmologies. None: one after the other.
-    **options
+    options : any
         As for :func:`history_from_table`.
 
     Returns

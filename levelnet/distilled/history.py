@@ -85,11 +85,13 @@ class FastHistory:
         How it ended.
     redshift : ndarray, dimensionless
         As asked, descending.
-    free_electron_fraction, ionized_hydrogen_fraction, neutral_hydrogen_fraction : ndarray
-        n_e, n_HII and n_HI over n_H.
+    free_electron_fraction : ndarray, dimensionless
+        n_e / n_H.
+    ionized_hydrogen_fraction, neutral_hydrogen_fraction : ndarray, dimensionless
+        n_HII and n_HI over n_H.
     matter_temperature_k, radiation_temperature_k : ndarray, K
         T_m and T_r.
-    start_redshift : float
+    start_redshift : float, dimensionless
         Where Saha equilibrium was left.
     n_steps, n_rejected : int
         Accepted and rejected steps.
@@ -176,15 +178,15 @@ def history_from_table(  # noqa: PLR0913 (each is a choice of the caller)
         Line treatment; None: the table's. Every open Lyman line must start from a kept level.
     two_photon_rate_per_s : float, s^-1, optional
         2s-1s decay rate before any change of constants; None: the table's.
-    relative : float, 1e-11 to 1e-3
+    relative : float, 1e-11 to 1e-3 (dimensionless)
         Error of x_e from stepping and interpolation.
     sensitivities : bool
         Also give the exact derivatives of everything, z_*, r_s and k_D among them.
     observables : bool
         Also give z_*, r_s and k_D.
-    rate_scales : mapping of str to float, optional
+    rate_scales : mapping of str to float, dimensionless, optional
         Factors on effective rates, named as :func:`rate_names` names them.
-    fine_structure_change, electron_mass_change : float, -0.2 to 0.2, optional
+    fine_structure_change, electron_mass_change : float, -0.2 to 0.2 (dimensionless), optional
         Relative changes of constants; None: those of the table.
 
     Returns

@@ -38,8 +38,8 @@ class LocalRates:
     matter_temperature_k_per_s : float, K/s
         dT_m/dt.
     electron_fraction_by, matter_temperature_by : mapping of str to float
-        Partial derivatives of either by each argument, per unit of the argument under its own name,
-        and by the ln of a factor on each effective rate ("ln recombination_2s", ...).
+        Partial derivatives of either (s^-1 and K/s) by each argument, per unit of the argument
+        under its own name, and by the ln of a factor on each effective rate ("ln recombination_2s", ...).
     """
 
     electron_fraction_per_s: float
@@ -79,15 +79,19 @@ def rate_of_change(  # noqa: PLR0913 (each is a condition or a choice of the cal
         H: a third of the local divergence of the velocity, which thins Lyman-alpha and cools.
     helium_ratio : float, dimensionless, not negative
         n_He/n_H; neutral.
-    fine_structure_change, electron_mass_change : float, -0.2 to 0.2
+    fine_structure_change, electron_mass_change : float, -0.2 to 0.2 (dimensionless)
         Relative changes of constants; None: those of the table.
-    lines, two_photon_rate_per_s, rate_scales
-        As for :func:`history_from_table`.
+    lines : Lines, optional
+        Line treatment; None: the table's.
+    two_photon_rate_per_s : float, s^-1, optional
+        2s-1s decay rate before any change of constants; None: the table's.
+    rate_scales : mapping of str to float, dimensionless, optional
+        Factors on effective rates, named as :func:`rate_names` names them.
 
     Returns
     -------
     LocalRates
-        dx_e/dt and dT_m/dt with all partial derivatives, each analytic.
+        dx_e/dt in s^-1 and dT_m/dt in K/s with all partial derivatives, each analytic.
 
     Raises
     ------

@@ -78,8 +78,8 @@ class Quadrature(NamedTuple):
 def _rule() -> tuple[FloatArray, FloatArray, FloatArray]:
     """Nodes and weights on [0, 1], and the matrix from node values to powers of t."""
     roots, weights = np.polynomial.legendre.leggauss(_NODES)
-    nodes: FloatArray = 0.5 * (roots + 1.0)
-    to_powers: FloatArray = np.linalg.inv(np.vander(nodes, increasing=True))
+    nodes = np.array(0.5 * (roots + 1.0), dtype=np.float64)
+    to_powers = np.linalg.inv(np.vander(nodes, increasing=True)).astype(np.float64)
     return nodes, 0.5 * weights, to_powers
 
 
