@@ -39,7 +39,8 @@ class LocalRates:
         dT_m/dt.
     electron_fraction_by, matter_temperature_by : mapping of str to float
         Partial derivatives of either (s^-1 and K/s) by each argument, per unit of the argument
-        under its own name, and by the ln of a factor on each effective rate ("ln recombination_2s", ...).
+        under its own name, and by the ln of a factor on each effective rate
+        ("ln recombination_2s", ...).
     """
 
     electron_fraction_per_s: float
