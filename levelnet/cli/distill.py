@@ -164,17 +164,9 @@ def _processes(workers: int | None) -> Iterator[Executor | None]:
     if count == 1:
         yield None
         return
-    import multiprocessing
-    import signal
-    from concurrent.futures import ProcessPoolExecutor
+    from ..distilled.nodes import process_pool
 
-    # Ctrl-C reaches the whole group of processes; only this one is to answer.
-    executor = ProcessPoolExecutor(
-        count,
-        mp_context=multiprocessing.get_context("spawn"),
-        initializer=signal.signal,
-        initargs=(signal.SIGINT, signal.SIG_IGN),
-    )
+    executor = process_pool(count)
     try:
         yield executor
     finally:

@@ -172,7 +172,7 @@ def history_from_table(  # noqa: PLR0913 (each is a choice of the caller)
     cosmology : Cosmology
         Any; it need not be the table's.
     redshifts : array_like, dimensionless, optional
-        Output redshifts in any order, at least two different ones, with T_r inside the table;
+        Output redshifts in any order, one or more, with T_r inside the table;
         None: 2000, evenly spaced in ln(1 + z), over the grid of the table's setup.
     lines : Lines, optional
         Line treatment; None: the table's. Every open Lyman line must start from a kept level.
@@ -213,6 +213,8 @@ def history_from_table(  # noqa: PLR0913 (each is a choice of the caller)
     Ali-Haimoud & Hirata 2010, Phys. Rev. D 82, 063521 (effective multilevel atom); Hairer & Wanner
     1996, Solving Ordinary Differential Equations II (Rosenbrock and Radau methods).
     """
+    if not isinstance(table, EffectiveTable) or not isinstance(cosmology, Cosmology):
+        raise InputError("an EffectiveTable (levelnet.read reads one) and a Cosmology are needed")
     if not _TIGHTEST <= relative <= _LOOSEST:
         raise InputError(f"relative = {relative:g}: allowed are {_TIGHTEST:g} to {_LOOSEST:g}")
     physics = choose_physics(table, fine_structure_change, electron_mass_change)
@@ -244,13 +246,14 @@ def _redshifts(table: EffectiveTable, asked: ArrayLike | None) -> FloatArray:
         redshift = np.expm1(np.linspace(*ends, _COUNT))
         redshift[[0, -1]] = grid.redshift_start, grid.redshift_end
         return redshift
-    redshift = np.array(asked, dtype=float)
-    if redshift.ndim != 1 or not np.all(np.isfinite(redshift)):
-        raise InputError("redshifts: a plain sequence of finite numbers is needed")
+    try:
+        redshift = np.atleast_1d(np.array(asked, dtype=float))
+    except (TypeError, ValueError):
+        redshift = np.array([np.nan])
+    if redshift.ndim != 1 or not len(redshift) or not np.all(np.isfinite(redshift)):
+        raise InputError("redshifts: one finite number or a plain sequence of them is needed")
     if np.any(redshift[1:] >= redshift[:-1]):
         redshift = np.unique(redshift)[::-1]
-    if len(redshift) < 2:
-        raise InputError("redshifts: at least two different values are needed")
     return np.ascontiguousarray(redshift)
 
 

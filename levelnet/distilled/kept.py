@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import operator
 from collections.abc import Iterable
 
 from ..errors import InputError
@@ -42,7 +43,7 @@ def choose_kept(setup: Setup, kept: Iterable[tuple[int, int]] | None) -> KeptCho
         return tuple(sorted(needed))
     n_max = setup.hydrogen.n_max
     try:
-        chosen = {(int(n), int(l)) for n, l in kept}
+        chosen = {(operator.index(n), operator.index(l)) for n, l in kept}
     except (TypeError, ValueError):
         raise InputError("kept: give pairs of whole numbers (n, l)") from None
     bad = sorted(level for level in chosen if not 2 <= level[0] <= n_max or not _l_fits(level))

@@ -8,6 +8,10 @@ from __future__ import annotations
 
 import functools
 import multiprocessing
+import multiprocessing.connection
+import os
+import signal
+import threading
 from collections.abc import Callable, Iterator
 from concurrent.futures import (
     BrokenExecutor,
@@ -96,7 +100,24 @@ def compute_node(atom: Atom, temperature_k: float) -> dict[str, FloatArray]:
 
 def process_pool(workers: int) -> ProcessPoolExecutor:
     """Pool of worker processes started afresh (spawn), as forked threads and locks would not be."""
-    return ProcessPoolExecutor(workers, mp_context=multiprocessing.get_context("spawn"))
+    return ProcessPoolExecutor(
+        workers, mp_context=multiprocessing.get_context("spawn"), initializer=start_worker
+    )
+
+
+def start_worker() -> None:
+    """Make a worker leave Ctrl-C to its parent, and end with it however the parent ends."""
+    # Ctrl-C reaches the whole group of processes; only the parent is to answer.
+    signal.signal(signal.SIGINT, signal.SIG_IGN)
+    threading.Thread(target=_end_with_parent, daemon=True).start()
+
+
+def _end_with_parent() -> None:
+    # A parent that is killed cannot tell its workers; the sentinel becomes ready all the same.
+    parent = multiprocessing.parent_process()
+    if parent is not None:
+        multiprocessing.connection.wait([parent.sentinel])
+        os._exit(1)
 
 
 @dataclass(slots=True, eq=False)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from dataclasses import dataclass
 from typing import NamedTuple, Protocol
 
@@ -39,6 +40,10 @@ class KeptLevels:
     def __len__(self) -> int:
         """Count the levels."""
         return len(self.n)
+
+    def __iter__(self) -> Iterator[tuple[int, int]]:
+        """Give (n, l) of each level."""
+        return iter(zip(self.n.tolist(), self.l.tolist(), strict=True))
 
 
 class ReducedRates(NamedTuple):

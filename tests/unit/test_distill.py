@@ -314,3 +314,40 @@ def test_certificate_finds_a_spoilt_table(monkeypatch: pytest.MonkeyPatch) -> No
     assert largest["recombination 2p"] == pytest.approx(1e-5, rel=1e-2)
     assert largest["photoionization 2p"] == pytest.approx(1e-5, rel=1e-2)
     assert largest["recombination 2s"] < 1e-8
+
+
+PARENT = """
+import multiprocessing, os, sys, time
+from levelnet.distilled.nodes import process_pool
+
+if __name__ == "__main__":
+    with process_pool(1) as pool:
+        print(pool.submit(os.getpid).result(), flush=True)
+        time.sleep(120.0)
+"""
+
+
+@pytest.mark.skipif(not Path("/proc").is_dir(), reason="needs /proc to see a process end")
+def test_workers_end_with_a_killed_parent(tmp_path: Path) -> None:
+    script, root = tmp_path / "parent.py", Path(__file__).parents[2]
+    script.write_text(PARENT)
+    env = os.environ | {"PYTHONPATH": str(root)}
+    with subprocess.Popen(
+        [sys.executable, str(script)], env=env, stdout=subprocess.PIPE, text=True
+    ) as parent:
+        assert parent.stdout is not None
+        worker = Path("/proc") / parent.stdout.readline().strip()
+        assert worker.is_dir()
+        parent.send_signal(signal.SIGKILL)
+    give_up = time.monotonic() + 20.0
+    while worker.is_dir() and _state(worker) != "Z" and time.monotonic() < give_up:
+        time.sleep(0.05)
+    assert not worker.is_dir() or _state(worker) == "Z"
+
+
+def _state(process: Path) -> str:
+    """Letter of the state of a process; Z: ended, and nobody has asked how."""
+    try:
+        return (process / "stat").read_text().rpartition(")")[2].split()[0]
+    except FileNotFoundError:
+        return "Z"
