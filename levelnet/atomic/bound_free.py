@@ -37,7 +37,6 @@ __all__ = [
     "photon_energy_ev",
     "recombination_coefficient",
     "recombination_weights",
-    "spectral_recombination",
     "thermal_volume_cm3",
 ]
 
@@ -167,47 +166,6 @@ def recombination_weights(
     energy_ev = photon_energy_ev(np.arange(1, atom.n_max + 1), atom.grid, atom.charge)
     enhancement = 1.0 + _occupation_number(energy_ev, radiation_temperature_k, occupation)
     return _mode_rate(energy_ev, atom.grid, atom.charge) * enhancement
-
-
-def spectral_recombination(
-    atom: BoundFree,
-    n: int,
-    radiation_temperature_k: float | None = None,
-    occupation: Occupation | None = None,
-) -> FloatArray:
-    """Recombination onto the levels of shell n, resolved by electron energy.
-
-    Parameters
-    ----------
-    atom : BoundFree
-        Cross sections.
-    n : int, dimensionless
-        Shell, 1 to atom.n_max.
-    radiation_temperature_k : float, K, optional
-        Temperature of the blackbody that stimulates recombination; None: no stimulated part.
-    occupation : callable, optional
-        Photon occupation number as a function of photon energy in eV, in place of a blackbody.
-
-    Returns
-    -------
-    ndarray, shape (n, n_nodes), s^-1
-        S with alpha_nl(T_m) = thermal_volume_cm3(T_m) sum over nodes of maxwell_factor(T_m) S.
-
-    Notes
-    -----
-    S = (2l+1) (8 pi nu^2/c^2) sigma_nl (1 + f) d(nu), from the Milne relation.
-
-    References
-    ----------
-    Milne 1924, Phil. Mag. 47, 209.
-    """
-    if not 1 <= n <= atom.n_max:
-        raise InputError(f"n = {n}: allowed are 1 to n_max = {atom.n_max}")
-    energy_ev = photon_energy_ev(np.array(n), atom.grid, atom.charge)
-    enhancement = 1.0 + _occupation_number(energy_ev, radiation_temperature_k, occupation)
-    weight = 2.0 * np.arange(n)[:, None] + 1.0
-    spontaneous = _mode_rate(energy_ev, atom.grid, atom.charge) * atom.cross_section_cm2[n - 1]
-    return weight * spontaneous * enhancement
 
 
 def photon_energy_ev(n: IntArray, grid: ElectronGrid, charge: int = 1) -> FloatArray:

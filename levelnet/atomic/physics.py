@@ -26,11 +26,6 @@ class Physics:
     fine_structure_change: Annotated[float, Field(ge=-0.2, le=0.2)] = 0.0
     electron_mass_change: Annotated[float, Field(ge=-0.2, le=0.2)] = 0.0
 
-    @property
-    def unchanged(self) -> bool:
-        """True where every constant is as measured."""
-        return self.fine_structure_change == 0.0 and self.electron_mass_change == 0.0
-
 
 @dataclass(frozen=True, slots=True)
 class Scales:

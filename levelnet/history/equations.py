@@ -7,8 +7,9 @@ either fraction, and the tiny difference of the two temperatures is carried as s
     du/ds = -F / (H x_HII x_HI),        F the net recombinations per hydrogen nucleus and second,
     dv/ds = -1 + (Gamma/H) (e^-v - 1),  Gamma the Compton rate.
 
-The heat that recombining electrons take along, of order (dx_e/dt)/Gamma or 1e-6 of T_m at most
-where it counts, is left out (common practice).
+The heat that recombining electrons take along is left out (common practice). Its bound, a change of
+T_m by (dx_e/dt) / [(1 + f_He + x_e)(Gamma + 2H)], is 2.6e-5 near z = 880 and 1e-5 to 2e-5 below
+(``python -m benchmarks.choices``).
 """
 
 from __future__ import annotations

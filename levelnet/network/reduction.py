@@ -20,16 +20,17 @@ Ali-Haimoud & Hirata 2010, Phys. Rev. D 82, 063521; Burgin 2009, Bull. Lebedev P
 
 from __future__ import annotations
 
-import heapq
 from dataclasses import dataclass
 
 import numpy as np
+from scipy import sparse
+from scipy.sparse.csgraph import dijkstra
 
 from .. import constants as const
 from ..arrays import BoolArray, FloatArray, IntArray
 from ..atomic.bound_free import recombination_weights
 from .assembly import FactoredInterior, Workspace, factor_interior
-from .ladder import Ladder, lines_of
+from .ladder import Ladder
 
 # Tables are split at this T_r. Below it, exchange over a high barrier leaves the doubles (with
 # {2s, 2p} kept it is e^-986 of an ordinary rate); what is left of it is the Boltzmann factor.
@@ -78,37 +79,35 @@ class Pairs:
 def exchange_pairs(ladder: Ladder) -> Pairs:
     """List the pairs of kept levels and the barrier between them."""
     lower, upper = np.triu_indices(len(ladder.kept), 1)
-    climb = [_climbs_ev(ladder, own) for own in ladder.kept_position.tolist()]
-    goals = ladder.kept_position.tolist()
-    talks = zip(lower.tolist(), upper.tolist(), strict=True)
-    barrier = np.array([climb[j].get(goals[i], 0.0) for i, j in talks])
-    return Pairs(lower, upper, barrier)
+    climb = _least_climbs_ev(ladder)
+    barrier = climb[upper, lower]
+    # A pair that no detour joins does not talk; its barrier means nothing.
+    return Pairs(lower, upper, np.where(np.isfinite(barrier), barrier, 0.0))
 
 
-def _climbs_ev(ladder: Ladder, start: int) -> dict[int, float]:
-    """Least sum of climbs from one kept level to each other through the interior (Dijkstra).
+def _least_climbs_ev(ladder: Ladder) -> FloatArray:
+    """Least sum of climbs from each kept level to each other through the interior, eV.
 
     Falls cost nothing, each climb costs its energy: in a cold field an atom that must climb out of
     a level competes with all that fall from it. No detour needs more than two shells above the
-    kept.
+    kept. Kept levels begin and end detours but do not pass them on, so each stands twice in the
+    graph. Shape (n_kept, n_kept), infinite where there is no way.
     """
     top = min(ladder.n_max, int(ladder.kept.n.max()) + 2)
-    kept = set(ladder.kept_position.tolist())
-    energy = ladder.levels.energy_ev
-    known: dict[int, float] = {}
-    queue = [(0.0, start)]
-    while queue:
-        cost, level = heapq.heappop(queue)
-        if level in known:
-            continue
-        known[level] = cost
-        if level in kept and level != start:
-            continue
-        n, l = int(ladder.levels.n[level]), int(ladder.levels.l[level])
-        for other in lines_of(ladder, n, l)[0].tolist():
-            if other not in known and ladder.levels.n[other] <= top:
-                heapq.heappush(queue, (cost + max(0.0, energy[other] - energy[level]), other))
-    return known
+    n, l = ladder.levels.n, ladder.levels.l
+    reach = np.flatnonzero((n > 1) & (n <= top))
+    one, other = np.nonzero(
+        (np.abs(np.subtract.outer(l[reach], l[reach])) == 1)
+        & (n[reach][:, None] != n[reach][None, :])
+    )
+    start, end = reach[one], reach[other]
+    energy, size, kept = ladder.levels.energy_ev, len(n), ladder.kept_position
+    cost = np.maximum(0.0, energy[end] - energy[start])
+    ends_here = np.isin(end, kept)
+    graph = sparse.csr_array(
+        (cost, (start, np.where(ends_here, end + size, end))), shape=(2 * size, 2 * size)
+    )
+    return np.asarray(dijkstra(graph, indices=kept)[:, kept + size])
 
 
 def reduce_at(

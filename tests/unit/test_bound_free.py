@@ -21,7 +21,7 @@ from levelnet.atomic.bound_free import (
     photoionization_cross_section,
     photoionization_rate,
     recombination_coefficient,
-    spectral_recombination,
+    recombination_weights,
     thermal_volume_cm3,
 )
 from levelnet.atomic.hydrogenic import log_continuum_start
@@ -284,7 +284,9 @@ def test_whole_atom_gives_what_single_levels_give(radiation: float | None) -> No
     atom = bound_free(12, charge=2)
     boltzmann = maxwell_factor(atom.grid, [50.0, 2500.0], charge=2)
     for n in (1, 5, 12):
-        spectrum = spectral_recombination(atom, n, radiation)
+        weight = 2.0 * np.arange(n)[:, None] + 1.0
+        per_shell = recombination_weights(atom, radiation)[n - 1]
+        spectrum = weight * atom.cross_section_cm2[n - 1] * per_shell
         whole = thermal_volume_cm3([50.0, 2500.0], charge=2)[:, None] * (boltzmann @ spectrum.T)
         single = recombination_coefficient(
             n, np.arange(n), np.array([[50.0], [2500.0]]), radiation, charge=2
@@ -375,7 +377,6 @@ def test_broadcasting_and_scalars() -> None:
         (lambda: recombination_coefficient(2, 1, 9.0, 9.0, occupation=np.exp), "not both"),
         (lambda: photoionization_rate(2, 1), "one of them"),
         (lambda: photoionization_rate(2, 1, 9.0, occupation=np.exp), "one of them"),
-        (lambda: spectral_recombination(bound_free(2), 3), "allowed are 1 to n_max = 2"),
         (lambda: bound_free(0), "allowed are 1 to 1000"),
     ],
 )
