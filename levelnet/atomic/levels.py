@@ -7,7 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from .. import constants as const
-from ..arrays import FloatArray, IntArray, frozen_array
+from ..arrays import BoolArray, FloatArray, IntArray, frozen_array
 from ..errors import InputError
 
 
@@ -96,9 +96,9 @@ class LevelSet:
     Attributes
     ----------
     n, l : ndarray of int
-        Quantum numbers.
+        Quantum numbers; l = -1 stands for a whole shell, every l of it populated by its weight.
     statistical_weight : ndarray, dimensionless
-        2 (2l + 1), electron spin counted, nuclear spin not.
+        2 (2l + 1), or 2 n^2 for a whole shell; electron spin counted, nuclear spin not.
     energy_ev : ndarray, eV
         Energy above the ground state.
     ionization_energy_ev : ndarray, eV
@@ -122,6 +122,11 @@ class LevelSet:
     def __len__(self) -> int:
         """Count the levels."""
         return len(self.n)
+
+    @property
+    def shell(self) -> BoolArray:
+        """True where an entry is a whole shell, shape (n_levels,)."""
+        return np.asarray(self.l < 0)
 
     def index(self, n: int, l: int) -> int:
         """Position of level (n, l) along the last axis of populations."""

@@ -1,0 +1,1 @@
+"""Studies made of runs: how many levels matter, which rates the answer hangs on."""

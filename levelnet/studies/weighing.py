@@ -1,0 +1,101 @@
+"""What a weighing gives back: the derivative of each target by the logarithm of every rate."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from ..arrays import FloatArray, IntArray, frozen_array
+from ..atomic.levels import LevelSet
+from ..errors import InputError, Outcome
+from ..history.setup import Setup
+
+PROCESSES = ("two_photon", "bound_bound", "bound_free", "escape", "compton")
+"""Processes that make up the network; the sum over one is the derivative by a common factor."""
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Weighing:
+    """Sensitivities of scalars of one history to every rate; n_targets is the first axis.
+
+    Every derivative is d ln J / d ln (rate), dimensionless. A rate and its inverse obey detailed
+    balance, so that both scale together.
+
+    Attributes
+    ----------
+    setup : Setup
+        What was asked.
+    outcome : Outcome
+        How the history ended.
+    targets, units : tuple of str, length n_targets
+        The scalars J, such as "x_e(900)", and their units ("1" where there is none).
+    value : ndarray, shape (n_targets,)
+        J.
+    levels : LevelSet
+        Every level of hydrogen.
+    upper, lower : ndarray of int, shape (n_transitions,)
+        Positions in `levels` of both ends of every dipole transition between excited levels.
+    lines : tuple of str, length n_lines
+        Lines to the ground state that exchange photons: "2p-1s", ...
+    parameters : tuple of str, length n_parameters
+        Parameters of the cosmology, named as in the setup.
+    bound_bound : ndarray, shape (n_targets, n_transitions)
+        By the strength of each dipole transition.
+    bound_free : ndarray, shape (n_targets, n_levels)
+        By each level's cross section: recombination and photoionization together.
+    escape : ndarray, shape (n_targets, n_lines)
+        By the rate at which photons of each line escape.
+    two_photon, compton : ndarray, shape (n_targets,)
+        By the 2s-1s rate, and by the Compton rate that couples T_m to T_r.
+    parameter : ndarray, shape (n_targets, n_parameters)
+        By the ln of each parameter of the cosmology, the others held; dark energy closes the
+        budget.
+    """
+
+    setup: Setup
+    outcome: Outcome
+    targets: tuple[str, ...]
+    units: tuple[str, ...]
+    value: FloatArray
+    levels: LevelSet
+    upper: IntArray
+    lower: IntArray
+    lines: tuple[str, ...]
+    parameters: tuple[str, ...]
+    bound_bound: FloatArray
+    bound_free: FloatArray
+    escape: FloatArray
+    two_photon: FloatArray
+    compton: FloatArray
+    parameter: FloatArray
+
+    def __post_init__(self) -> None:
+        """Check shapes and make every array read-only."""
+        count = len(self.targets)
+        for name in ("value", "two_photon", "compton"):
+            frozen_array(self, name, (count,))
+        for name in ("upper", "lower"):
+            frozen_array(self, name, (len(self.upper),), np.int64)
+        frozen_array(self, "bound_bound", (count, len(self.upper)))
+        frozen_array(self, "bound_free", (count, len(self.levels)))
+        frozen_array(self, "escape", (count, len(self.lines)))
+        frozen_array(self, "parameter", (count, len(self.parameters)))
+
+    def index(self, target: str) -> int:
+        """Position of `target` along the first axis."""
+        if target not in self.targets:
+            raise InputError(f'target "{target}": weighed were {", ".join(self.targets)}')
+        return self.targets.index(target)
+
+    def processes(self, target: str) -> dict[str, float]:
+        """Derivative by a common factor on each process, and on Lyman-alpha's escape alone."""
+        at = self.index(target)
+        return {
+            "two_photon": float(self.two_photon[at]),
+            "bound_bound": float(self.bound_bound[at].sum()),
+            "bound_free": float(self.bound_free[at].sum()),
+            "lyman_alpha": float(self.escape[at, self.lines.index("2p-1s")]),
+            "escape": float(self.escape[at].sum()),
+            "compton": float(self.compton[at]),
+        }
