@@ -54,7 +54,7 @@ def _rule() -> _Rule:
     fit: FloatArray = (degree + 0.5) * weights * legendre.legvander(nodes, _NODES - 1).T
     integral: FloatArray = legendre.legint(fit, lbnd=-1.0).astype(np.float64)
     slope, curve = (legendre.legder(fit, order).astype(np.float64) for order in (1, 2))
-    inside: FloatArray = legendre.legval(nodes, integral).T
+    inside = np.asarray(legendre.legval(nodes, integral).T, dtype=np.float64)
     return _Rule(nodes, weights, {-1: integral, 0: fit, 1: slope, 2: curve}, inside)
 
 
