@@ -11,9 +11,10 @@ c_s = c/sqrt(3 (1 + R)), eta conformal time, and z_end the lowest redshift of th
     t(z)     = int_{z}^{infinity} dz/(H (1 + z))                     at z_*
 
 There is no reionization in any of them. Above the first point x_e counts as 1: only k_D sees it, by
-a relative error no larger than half the neutral fraction there (1e-8 at T_r = 9000 K, 3e-6 at 7000
-K), for what lies above adds less than all of 1/k_D^2. Tight coupling, on which k_D rests, is taken
-to hold up to z_*, as in the references, although it ceases there.
+a relative error below half the neutral fraction there (1.4e-10 at T_r = 9000 K, 1.4e-8 at 7000 K,
+5e-7 at 6000 K, in Saha equilibrium). Helium's electrons are not in x_e: before z = 1800 they raise
+k_D by 0.5 per cent. Tight coupling, on which k_D rests, is taken to hold up to z_*, as in the
+references, although it ceases there.
 
 Every observable is a functional of ln(sigma_T n_e), ln H and ln R; its change is kept as weights on
 these three at the points of the quadrature, from which all derivatives follow.

@@ -15,11 +15,12 @@ from .solve import compute, finish
 NAME = "demo"
 SUMMARY = "solve an invented scenario and draw it"
 DESCRIPTION = (
-    "Write the setup of an invented scenario, solve it, and draw its figures. The instrument and "
-    "its cosmology do not exist."
+    "Write the setup of an invented scenario, the accuracy it asks for and the response of its "
+    "instrument; solve it, and draw its figures. The instrument and its cosmology do not exist."
 )
 EXAMPLE = "levelnet demo --output demo-folder"
 
+_TEXTS = ("demo.toml", "demo-requirement.toml", "demo-response.csv")
 _INVENTED = "This scenario is invented: no real instrument, no measured cosmology."
 
 
@@ -31,39 +32,43 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
         metavar="FOLDER",
         type=Path,
         default=Path("levelnet-demo"),
-        help="folder for setup, result and figures (default: levelnet-demo)",
+        help="folder for all that is written (default: levelnet-demo)",
     )
     parser.add_argument("--force", action="store_true", help="overwrite what is in the folder")
 
 
-def demo_text() -> str:
-    """Return the text of the demo's setup file."""
-    return files("levelnet.cli").joinpath("demo.toml").read_text(encoding="utf-8")
+def demo_text(name: str = "demo.toml") -> str:
+    """Return the text of a file of the demo: its setup, requirement or response."""
+    return files("levelnet.cli").joinpath(name).read_text(encoding="utf-8")
 
 
 def run(options: argparse.Namespace, console: Console) -> int:
-    """Write demo.toml, demo.h5 and figures; print the summary."""
+    """Write setup, requirement, response, demo.h5 and figures; print the summary."""
     start = time.monotonic()
     folder: Path = options.output
     from ..report.figures import check_free, figure_paths, save_figures
 
-    setup_file, result_file = folder / "demo.toml", folder / "demo.h5"
+    texts = {folder / name: demo_text(name) for name in _TEXTS}
+    result_file = folder / "demo.h5"
     check_folder(folder)
-    check_free((setup_file, result_file, *figure_paths(folder)), options.force)
+    check_free((*texts, result_file, *figure_paths(folder)), options.force)
 
     from ..history.setup import parse_setup
     from ..store import whole_file, write
 
-    history, seconds = compute(parse_setup(demo_text(), "demo.toml"), console, cache=True)
+    history, seconds = compute(
+        parse_setup(texts[folder / "demo.toml"], "demo.toml"), console, cache=True
+    )
     # Nothing is written before the calculation has ended well enough to show.
     folder.mkdir(parents=True, exist_ok=True)
-    with whole_file(setup_file, options.force) as stream:
-        stream.write(demo_text().encode())
+    for path, text in texts.items():
+        with whole_file(path, options.force) as stream:
+            stream.write(text.encode())
     write(history, result_file, force=options.force)
     with console.progress() as progress:
         figures = save_figures(history, folder, force=options.force, progress=progress)
     total = time.monotonic() - start
-    written = [setup_file, result_file, *figures]
+    written = [*texts, result_file, *figures]
     if options.json:
         more = {"invented": True, "written": written, "seconds": seconds, "total_seconds": total}
         print_json({**history_values(history), **more})

@@ -24,8 +24,10 @@ import numpy as np
 import pytest
 
 import levelnet
+from levelnet.cli.demo import demo_text
 from levelnet.cli.main import main
 from levelnet.errors import AccuracyWarning, SolveError
+from levelnet.studies.requirement import load_requirement
 
 ROOT = Path(__file__).resolve().parents[2]
 GOOD = """\
@@ -325,7 +327,10 @@ def test_demo_says_that_it_is_invented(
 ) -> None:
     # A smaller atom, so that the test is short; the demo as it is runs under the benchmarks.
     small = files("levelnet.cli").joinpath("demo.toml").read_text().replace("= 30", "= 4")
-    monkeypatch.setattr("levelnet.cli.demo.demo_text", lambda: small)
+    monkeypatch.setattr(
+        "levelnet.cli.demo.demo_text",
+        lambda name: small if name == "demo.toml" else demo_text(name),
+    )
     monkeypatch.setattr("levelnet.report.style.render", lambda figure, kind: b"drawn")
     assert main(["demo"]) == 0
     assert "invented" in capsys.readouterr().out
@@ -333,7 +338,11 @@ def test_demo_says_that_it_is_invented(
     assert (made / "demo.toml").read_text() == small
     assert levelnet.read(made / "demo.h5").setup == levelnet.load_setup(made / "demo.toml")
     assert len(list(made.glob("*.svg"))) == 5
-    assert "INVENTED" in (made / "demo.toml").read_text()
+    for name in ("demo.toml", "demo-requirement.toml", "demo-response.csv"):
+        assert "INVENTED" in (made / name).read_text()
+    asked = load_requirement(made / "demo-requirement.toml")
+    assert asked.response is not None
+    assert len(asked.response.rows.names) == 3
     assert main(["demo"]) == 2
     assert "--force" in complaint(capsys)
 

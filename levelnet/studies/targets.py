@@ -1,0 +1,123 @@
+"""Names of what a study is asked about: "x_e(900)", "z_*", "optical_depth(1100)", "line(3d-2p)"."""
+
+from __future__ import annotations
+
+import math
+import re
+from typing import NamedTuple
+
+from ..atomic.levels import level_name
+from ..background.last_scattering import UNITS, at_redshift
+from ..errors import InputError
+from ..history.cost import HIGHEST_N
+
+ALIASES = {
+    "z_*": "last_scattering_redshift",
+    "r_s": "sound_horizon_mpc",
+    "k_D": "damping_per_mpc",
+    "z_drag": "drag_redshift",
+    "r_drag": "drag_horizon_mpc",
+    "tau": "optical_depth",
+}
+"""Short names that users may write; results carry the long ones."""
+AT_REDSHIFT = {"x_e": "1", "T_m": "K", "optical_depth": "1"}
+"""Quantities that need a redshift, and their units."""
+# As in the grid of a setup.
+_HIGHEST_REDSHIFT = 10_000.0
+_LETTERS = "".join(level_name(1, l)[-1] for l in range(21))
+
+
+class Target(NamedTuple):
+    """One scalar of a history.
+
+    Attributes
+    ----------
+    name : str
+        Canonical name: the same for every way to write it.
+    kind : str
+        "x_e", "T_m", "optical_depth", "line", or "observable".
+    unit : str
+        "1" where there is none.
+    redshift : float, dimensionless
+        Of "x_e", "T_m" and "optical_depth"; NaN otherwise.
+    upper, lower : tuple of int
+        (n, l) of both ends of "line"; (0, 0) otherwise.
+    """
+
+    name: str
+    kind: str
+    unit: str
+    redshift: float = math.nan
+    upper: tuple[int, int] = (0, 0)
+    lower: tuple[int, int] = (0, 0)
+
+
+def known_targets() -> str:
+    """List in one line what can be asked for."""
+    scalars = [f"{a} or {ALIASES[a]}" for a in ALIASES if ALIASES[a] in UNITS]
+    scalars += [name for name in UNITS if name not in ALIASES.values()]
+    return ", ".join(["x_e(Z)", "T_m(Z)", "optical_depth(Z) or tau(Z)", *scalars, "line(3d-2p)"])
+
+
+def parse_target(text: str) -> Target:
+    """Read a target as a person writes it.
+
+    Parameters
+    ----------
+    text : str
+        A name of :data:`levelnet.background.last_scattering.OBSERVABLES`; a quantity with its
+        redshift (0 to 10000), as in "x_e(900)"; or a line with both levels in either order, as in
+        "line(3d-2p)".
+
+    Raises
+    ------
+    InputError
+        If it is none of them.
+    """
+    match = re.fullmatch(r"\s*([\w*]+)\s*(?:\((.*)\))?\s*", text, re.ASCII)
+    if match is None:
+        raise InputError(f'target "{text}" is not known; known are {known_targets()}')
+    name, argument = ALIASES.get(match[1], match[1]), match[2]
+    if name in UNITS:
+        if argument is not None:
+            raise InputError(f'target "{text}": {name} takes no argument')
+        return Target(name, "observable", UNITS[name])
+    if name in AT_REDSHIFT:
+        redshift = _redshift(text, match[1], argument)
+        return Target(at_redshift(name, redshift), name, AT_REDSHIFT[name], redshift)
+    if name == "line":
+        return _line(text, argument)
+    raise InputError(f'target "{text}" is not known; known are {known_targets()}')
+
+
+def _redshift(text: str, name: str, argument: str | None) -> float:
+    try:
+        redshift = float(argument or "")
+    except ValueError:
+        redshift = math.nan
+    if not 0.0 <= redshift <= _HIGHEST_REDSHIFT:
+        raise InputError(
+            f'target "{text}": a redshift from 0 to {_HIGHEST_REDSHIFT:g} is needed, as in '
+            f"{name}(900)"
+        )
+    return redshift + 0.0  # not -0
+
+
+def _line(text: str, argument: str | None) -> Target:
+    level = rf"\s*(\d{{1,4}})([{_LETTERS}])\s*"
+    match = re.fullmatch(f"{level}-{level}", argument or "")
+    if match is None:
+        raise InputError(f'target "{text}": two levels are needed, as in line(3d-2p)')
+    ends = [(int(match[k]), _LETTERS.index(match[k + 1])) for k in (1, 3)]
+    for n, l in ends:
+        if not l < n <= HIGHEST_N:
+            allowed = f"n is 1 to {HIGHEST_N} and l below n"
+            raise InputError(f'target "{text}": there is no level {level_name(n, l)}; {allowed}')
+    lower, upper = sorted(ends)
+    dipole = lower[0] != upper[0] and abs(lower[1] - upper[1]) == 1
+    if not dipole and (upper, lower) != ((2, 0), (1, 0)):
+        raise InputError(
+            f'target "{text}": no line: n must differ, and l by one; 2s-1s is the exception'
+        )
+    name = f"line({level_name(*upper)}-{level_name(*lower)})"
+    return Target(name, "line", "1", math.nan, upper, lower)
