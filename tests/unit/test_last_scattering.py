@@ -41,8 +41,8 @@ END = 30.0
 DEPTHS = (700.0, 1100.0, 1301.5)
 # What the panels are built for; scipy is asked for more.
 SAME = 1e-8
-# Fourth-order central differences with steps of 1e-3, of the largest derivative.
-SAME_DERIVATIVE = 1e-6
+# Fourth-order central differences with steps of 1e-3, of the sum of the absolute contributions.
+SAME_DERIVATIVE = 1e-7
 
 
 def fraction(s: NDArray[np.float64] | float) -> NDArray[np.float64]:
