@@ -177,7 +177,11 @@ def _damping(seen: Scattering, event: Event | None) -> Found | None:
 
 
 def _time(seen: Scattering, event: Event | None) -> Found | None:
-    return None if event is None else seen.integral(TIME, event)
+    if event is None:
+        return None
+    # The clock of the cosmology is exact with a tabulated expansion too.
+    redshift = math.expm1(-seen.grid.log_scale(event.place))
+    return seen.cosmology.cosmic_time_s(redshift), seen.integral(TIME, event)[1]
 
 
 def _width(seen: Scattering) -> Found | None:

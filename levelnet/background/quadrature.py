@@ -13,7 +13,7 @@ import numpy as np
 from numpy.polynomial import legendre
 from scipy.optimize import brentq
 
-from ..arrays import FloatArray
+from ..arrays import FloatArray, IntArray
 from ..errors import InputError
 from .cosmology import Cosmology
 
@@ -37,13 +37,12 @@ class _Rule(NamedTuple):
     """Nodes and weights on -1 to 1, and matrices from node values to Legendre coefficients.
 
     `orders` holds those of the integral from -1 (order -1), of the value (0), and of both
-    derivatives (1, 2); `inside` takes node values to the integrals from -1 to each node.
+    derivatives (1, 2).
     """
 
     nodes: FloatArray
     weights: FloatArray
     orders: dict[int, FloatArray]
-    inside: FloatArray
 
 
 @lru_cache(maxsize=1)
@@ -54,8 +53,7 @@ def _rule() -> _Rule:
     fit: FloatArray = (degree + 0.5) * weights * legendre.legvander(nodes, _NODES - 1).T
     integral: FloatArray = legendre.legint(fit, lbnd=-1.0).astype(np.float64)
     slope, curve = (legendre.legder(fit, order).astype(np.float64) for order in (1, 2))
-    inside = np.asarray(legendre.legval(nodes, integral).T, dtype=np.float64)
-    return _Rule(nodes, weights, {-1: integral, 0: fit, 1: slope, 2: curve}, inside)
+    return _Rule(nodes, weights, {-1: integral, 0: fit, 1: slope, 2: curve})
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -82,11 +80,18 @@ class Quadrature:
         """Integral from each left edge to the last edge, shape (n_panels,)."""
         return np.cumsum(self.panels(values)[::-1])[::-1]
 
-    def to_end_from_points(self, values: FloatArray) -> FloatArray:
-        """Integral from each point to the last edge, shape (n_points,)."""
-        half = 0.5 * np.diff(self.edges)[:, None]
-        inside = half * (values.reshape(-1, _NODES) @ _rule().inside.T)
-        return np.asarray((self.to_end(values)[:, None] - inside).ravel())
+    def to_end_from(self, values: FloatArray, log_scale: FloatArray) -> FloatArray:
+        """Integral from each s = `log_scale` on the panels to the last edge, same shape (n,)."""
+        panel = self._panel(log_scale)
+        return np.asarray(self.to_end(values)[panel] - self.curve(values, log_scale, -1))
+
+    def curve(self, values: FloatArray, log_scale: FloatArray, order: int = 0) -> FloatArray:
+        """Function at each s = `log_scale` on the panels, shape (n,); orders as in `at`."""
+        panel = self._panel(log_scale)
+        half = 0.5 * np.diff(self.edges)[panel]
+        x = (log_scale - self.edges[panel]) / half - 1.0
+        fit = _rule().orders[order] @ values.reshape(-1, _NODES).T
+        return np.asarray(legendre.legval(x, fit[:, panel], tensor=False) / half**order)
 
     def at(self, place: Place, order: int = 0) -> FloatArray:
         """Weights on the points, shape (n_points,), of the value at `place` (order 0).
@@ -134,9 +139,12 @@ class Quadrature:
         """Where s = `log_scale` is; None outside the panels."""
         if not self.edges[0] <= log_scale <= self.edges[-1]:
             return None
-        panel = int(np.searchsorted(self.edges[1:-1], log_scale, side="right"))
+        panel = int(self._panel(np.array(log_scale)))
         low, high = self.edges[panel : panel + 2].tolist()
         return Place(panel, (2.0 * log_scale - low - high) / (high - low))
+
+    def _panel(self, log_scale: FloatArray) -> IntArray:
+        return np.asarray(np.searchsorted(self.edges[1:-1], log_scale, side="right"))
 
     def _weights(self) -> FloatArray:
         half = 0.5 * np.diff(self.edges)
@@ -161,7 +169,8 @@ def quadrature(cosmology: Cosmology, start_s: float, end_s: float) -> Quadrature
     if not -math.inf < start_s < end_s < math.inf:
         raise InputError(f"start_s = {start_s:g} must be below end_s = {end_s:g}, both finite")
     middle = [math.log(cosmology.cmb_temperature_k / k) for k in _RECOMBINING_K]
-    stops = [start_s, *(one for one in middle if start_s < one < end_s), end_s]
+    joints = sorted(middle + _joint(cosmology))
+    stops = [start_s, *(one for one in joints if start_s < one < end_s), end_s]
     pieces = [np.array([start_s])]
     for low, high in itertools.pairwise(stops):
         fine = middle[0] < 0.5 * (low + high) < middle[1]
@@ -180,16 +189,27 @@ def _early_rule() -> tuple[FloatArray, FloatArray]:
     return 0.5 * (nodes + 1.0), 0.5 * weights
 
 
-def early_quadrature(end_s: float) -> tuple[FloatArray, FloatArray]:
+def early_quadrature(cosmology: Cosmology, end_s: float) -> tuple[FloatArray, FloatArray]:
     """Nodes in s and weights of integrals over ds from a = 0 to `end_s` (dimensionless).
 
     For integrands that are powers of a times something smooth at the very beginning.
     """
     nodes, weights = _early_rule()
-    edges = np.linspace(_FIRST, end_s, math.ceil(end_s - _FIRST) + 1)
-    width = (edges[1] - edges[0]) * np.ones((len(edges) - 1, 1))
-    s = np.concatenate([_FIRST + np.log(nodes), (edges[:-1, None] + width * nodes).ravel()])
-    return s, np.concatenate([weights / nodes, (width * weights).ravel()])
+    stops = [_FIRST, *(one for one in _joint(cosmology) if _FIRST < one < end_s), end_s]
+    s, weighed = [_FIRST + np.log(nodes)], [weights / nodes]
+    for low, high in itertools.pairwise(stops):
+        count = math.ceil(high - low)
+        width = (high - low) / count
+        edges = low + width * np.arange(count)
+        s.append((edges[:, None] + width * nodes).ravel())
+        weighed.append(np.tile(width * weights, count))
+    return np.concatenate(s), np.concatenate(weighed)
+
+
+def _joint(cosmology: Cosmology) -> list[float]:
+    """Give s where a tabulated expansion ends, and H may jump."""
+    table = cosmology.expansion_redshift
+    return [] if table is None else [-math.log1p(table[-1])]
 
 
 def root(function: Callable[[float], float], low: float = -1.0, high: float = 1.0) -> float:

@@ -42,15 +42,15 @@ class Scattering:
     def __init__(
         self, cosmology: Cosmology, grid: Quadrature, ionized: FloatArray, thomson: float
     ) -> None:
-        early_s, self.early_weights = early_quadrature(float(grid.edges[0]))
+        early_s, self.early_weights = early_quadrature(cosmology, float(grid.edges[0]))
         self.cosmology, self.grid, self.n_early = cosmology, grid, len(early_s)
         self.s = np.concatenate([early_s, grid.points])
         self.last_fraction = float(ionized[-1])
         growth = np.exp(-self.s)
-        electrons = cosmology.hydrogen_density_cm3(0.0) * growth**2
-        electrons[self.n_early :] *= ionized
-        # d tau/d eta per comoving Mpc, and d eta = c ds/(a H).
-        per_mpc = const.THOMSON_CROSS_SECTION_CM2 * thomson * const.CM_PER_MPC * electrons
+        electrons_cm3 = cosmology.hydrogen_density_cm3(0.0) * growth**3
+        electrons_cm3[self.n_early :] *= ionized
+        per_mpc = opacity_per_mpc(electrons_cm3, growth, thomson)
+        # d eta = c ds/(a H).
         rate = _hubble_rate_per_s(cosmology, growth)
         step_mpc = const.SPEED_OF_LIGHT_CM_S / const.CM_PER_MPC * growth / rate
         load = baryon_loading(cosmology) / growth
@@ -122,7 +122,8 @@ class Scattering:
     @cached_property
     def log_visibility(self) -> FloatArray:
         """Give ln g at the points, g in Mpc^-1."""
-        return np.asarray(self.log_opacity - self.grid.to_end_from_points(self.late(DEPTH)))
+        depth = self.grid.to_end_from(self.late(DEPTH), self.grid.points)
+        return np.asarray(self.log_opacity - depth)
 
     def visibility_change(self, place: Place) -> FloatArray:
         """Change of ln g at a fixed place."""
@@ -179,6 +180,24 @@ class Scattering:
         place = Place(panel, root(lambda x: height(x) - level, *between))
         slope = self.visibility_slope(panel)(place.x)
         return Event(place, (by_level - self.visibility_change(place)) / slope)
+
+
+def opacity_per_mpc(
+    electrons_cm3: FloatArray, growth: FloatArray, thomson: float = 1.0
+) -> FloatArray:
+    """D tau/d eta in Mpc^-1 (comoving), same shape as the arguments.
+
+    Parameters
+    ----------
+    electrons_cm3 : ndarray, cm^-3
+        n_e, proper.
+    growth : ndarray, dimensionless
+        1 + redshift.
+    thomson : float, dimensionless
+        Thomson cross section over the measured one.
+    """
+    cross_section_cm2 = const.THOMSON_CROSS_SECTION_CM2 * thomson
+    return np.asarray(cross_section_cm2 * electrons_cm3 / growth * const.CM_PER_MPC)
 
 
 def _hubble_rate_per_s(cosmology: Cosmology, growth: FloatArray) -> FloatArray:

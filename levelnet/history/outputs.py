@@ -15,6 +15,8 @@ from ..arrays import FloatArray
 from ..atomic.levels import level_name
 from ..atomic.physics import Scales
 from ..background.conditions import Conditions
+from ..background.quadrature import quadrature
+from ..background.scattering import opacity_per_mpc
 from ..errors import Outcome, SolveError
 from ..network.assembly import (
     FactoredInterior,
@@ -28,8 +30,15 @@ from ..numerics.stepping import Trajectory
 from .cost import table_tolerance
 from .equations import Local, SlowEquations, ionized_and_neutral
 from .integrate import Integrated, Progress
-from .observables import Visibility, dense_growth, milestones, visibility
-from .result import Channels, Diagnostics, History, LineFigures, SpeciesPopulations
+from .observables import milestones, optical_depth
+from .result import (
+    Channels,
+    Diagnostics,
+    History,
+    LineFigures,
+    Milestones,
+    SpeciesPopulations,
+)
 from .setup import Setup
 from .start import equilibrium_state
 
@@ -68,16 +77,17 @@ def assemble_history(
             outcome = Outcome.TABLE_TOO_COARSE
     if outcome.ok and slowest < SLOW_RELAXATION:
         outcome = Outcome.QUASI_STEADY_LOST
-    seen = _visibility(integrated, redshift)
-    growth = np.log1p(redshift)
     conditions = [o.local.conditions for o in outputs]
+    electron_fraction = np.array([c.electron_fraction for c in conditions])
+    hydrogen_cm3 = np.array([c.hydrogen_density_cm3 for c in conditions])
+    depth, visibility, marks = _seen(integrated, redshift, hydrogen_cm3 * electron_fraction)
     ionized = np.array([c.ionized_fraction for c in conditions])
     nothing = np.zeros(len(redshift))
     return History(
         setup,
         outcome,
         redshift,
-        np.array([c.electron_fraction for c in conditions]),
+        electron_fraction,
         ionized,
         np.array([c.ground_fraction for c in conditions]),
         nothing + 1.0,
@@ -85,15 +95,15 @@ def assemble_history(
         nothing,
         np.array([c.matter_temperature_k for c in conditions]),
         np.array([c.radiation_temperature_k for c in conditions]),
-        np.array([c.hydrogen_density_cm3 for c in conditions]),
+        hydrogen_cm3,
         np.array([c.hubble_rate_per_s for c in conditions]),
         setup.cosmology.cosmic_time_s(redshift),
-        np.maximum(seen.optical_depth(growth), 0.0),
-        np.exp(seen.log_visibility(growth)),
+        depth,
+        visibility,
         (_species(integrated, outputs),),
         _channels(integrated, redshift, outputs),
         _line_figures(integrated, outputs),
-        milestones(setup.cosmology, seen),
+        marks,
         _diagnostics(integrated, outputs, slowest),
         notes,
     )
@@ -133,22 +143,33 @@ def _as_measured(conditions: Conditions, factor: Scales) -> Conditions:
     )
 
 
-def _visibility(integrated: Integrated, redshift: FloatArray) -> Visibility:
-    """Optical depth and visibility on a dense grid over the whole range."""
-    handover = math.log1p(integrated.handover.redshift)
-    low = float(np.log1p(redshift[-1]))
-    log_growth = dense_growth(low, max(handover, float(np.log1p(redshift[0]))))
-    log_odds = np.empty(len(log_growth))
-    below = log_growth < handover
+def _seen(
+    integrated: Integrated, redshift: FloatArray, electrons_cm3: FloatArray
+) -> tuple[FloatArray, FloatArray, Milestones]:
+    """Optical depth, visibility in Mpc^-1, and the milestones of the whole range."""
+    equations = integrated.equations
+    cosmology, thomson = equations.cosmology, equations.scales.thomson
+    depth, marks = np.zeros(len(redshift)), Milestones(*(math.nan,) * 6)
+    start = max(integrated.handover.redshift, float(redshift[0]))
+    if start > redshift[-1]:  # not where the run ended before anything happened
+        grid = quadrature(cosmology, -math.log1p(start), -math.log1p(float(redshift[-1])))
+        electrons = _electron_fraction(integrated, grid.points)
+        depth = optical_depth(cosmology, grid, electrons, redshift, thomson)
+        marks = milestones(cosmology, grid, electrons, thomson)
+    visibility = opacity_per_mpc(electrons_cm3, 1.0 + redshift, thomson) * np.exp(-depth)
+    return depth, visibility, marks
+
+
+def _electron_fraction(integrated: Integrated, log_scale: FloatArray) -> FloatArray:
+    """n_e/n_H (dimensionless) at any ln a of the history."""
+    log_odds = np.empty(len(log_scale))
+    below = log_scale > -math.log1p(integrated.handover.redshift)
     trajectory = integrated.trajectory
     if below.any():
-        curve = CubicSpline(trajectory.time, trajectory.state[:, 0])
-        log_odds[below] = curve(-log_growth[below])
+        log_odds[below] = CubicSpline(trajectory.time, trajectory.state[:, 0])(log_scale[below])
     for k in np.flatnonzero(~below):
-        log_odds[k] = equilibrium_state(integrated.equations, -log_growth[k])[0][0]
-    electrons = np.array([ionized_and_neutral(u)[0] for u in log_odds.tolist()])
-    equations = integrated.equations
-    return visibility(equations.cosmology, log_growth, electrons, equations.scales.thomson)
+        log_odds[k] = equilibrium_state(integrated.equations, log_scale[k])[0][0]
+    return np.array([ionized_and_neutral(u)[0] for u in log_odds.tolist()])
 
 
 def _species(integrated: Integrated, outputs: list[_Output]) -> SpeciesPopulations:

@@ -11,14 +11,16 @@ from scipy import constants as si
 from scipy.integrate import quad
 from scipy.optimize import brentq, minimize_scalar
 
-from levelnet.history.observables import Visibility, dense_growth, milestones, visibility
+from levelnet.background.quadrature import Quadrature, quadrature
+from levelnet.history.observables import milestones, optical_depth
+from levelnet.history.result import Milestones
 from tests.small_runs import COSMOLOGY
 from tests.tolerances import published
 
 MPC_M = 1e6 * si.parsec
 LOW, HIGH = 30.0, 1900.0
-# The dense grid is made for it: its spline errs by the fourth power of the spacing.
-GRID = 1e-7
+# What the panels are built for.
+SAME = 1e-8
 # scipy's Thomson cross section is of the same CODATA edition, and agrees to 1e-10.
 
 
@@ -48,35 +50,30 @@ def shine(redshift: float) -> float:
     return slope(redshift) * math.exp(-depth(redshift))
 
 
-def seen(low: float = LOW, high: float = HIGH) -> Visibility:
-    growth = dense_growth(math.log1p(low), math.log1p(high))
-    electrons = np.array([fraction(z) for z in np.expm1(growth).tolist()])
-    return visibility(COSMOLOGY, growth, electrons)
+def panels(low: float = LOW, high: float = HIGH) -> tuple[Quadrature, np.ndarray]:
+    """Panels between two redshifts, and the electron fraction at their points."""
+    grid = quadrature(COSMOLOGY, -math.log1p(high), -math.log1p(low))
+    return grid, np.array([fraction(z) for z in np.expm1(-grid.points).tolist()])
 
 
-def test_optical_depth_and_visibility_point_by_point() -> None:
-    found = seen()
-    for z in (31.0, 200.0, 700.0, 1000.0, 1100.0, 1400.0, 1899.0):
-        x = math.log1p(z)
-        assert float(found.optical_depth(x)) == pytest.approx(depth(z), rel=GRID)
-        assert math.exp(float(found.log_visibility(x))) == pytest.approx(shine(z), rel=GRID * 100)
-    assert float(found.optical_depth(math.log1p(LOW))) == 0.0
+def marks(low: float = LOW, high: float = HIGH) -> Milestones:
+    return milestones(COSMOLOGY, *panels(low, high))
 
 
-def test_visibility_adds_up_to_all_that_is_scattered() -> None:
-    # int g d eta = 1 - exp(-tau) of the whole range, over the cosmology's own conformal time.
-    found = seen()
-    eta = -COSMOLOGY.conformal_time_mpc(np.expm1(found.log_growth))
-    total = np.trapezoid(np.exp(found.log_visibility(found.log_growth)), eta)
-    assert total == pytest.approx(1.0 - math.exp(-depth(HIGH)), rel=1e-5)
+def test_optical_depth_point_by_point() -> None:
+    z = np.array([31.0, 200.0, 700.0, 1000.0, 1100.0, 1400.0, 1899.0])
+    found = optical_depth(COSMOLOGY, *panels(), z)
+    np.testing.assert_allclose(found, [depth(one) for one in z.tolist()], rtol=SAME)
+    assert optical_depth(COSMOLOGY, *panels(), np.array([LOW]))[0] == pytest.approx(0.0, abs=1e-15)
+    np.testing.assert_allclose(optical_depth(COSMOLOGY, *panels(), z, 1.5), 1.5 * found, rtol=1e-12)
 
 
 def test_milestones_against_general_solvers() -> None:
-    found = milestones(COSMOLOGY, seen())
+    found = marks()
     last = brentq(lambda z: depth(z) - 1.0, 900.0, 1300.0, xtol=1e-9)
-    assert found.last_scattering_redshift == pytest.approx(last, rel=GRID)
+    assert found.last_scattering_redshift == pytest.approx(last, rel=SAME)
     assert found.half_ionized_redshift == pytest.approx(
-        brentq(lambda z: fraction(z) - 0.5, 1000.0, 1500.0, xtol=1e-10), rel=GRID
+        brentq(lambda z: fraction(z) - 0.5, 1000.0, 1500.0, xtol=1e-10), rel=SAME
     )
     peak = minimize_scalar(
         lambda z: -math.log(shine(z)), bracket=(950.0, last, 1300.0), options={"xtol": 1e-9}
@@ -91,31 +88,25 @@ def test_milestones_against_general_solvers() -> None:
 
 
 def test_events_that_the_range_does_not_reach_are_no_numbers() -> None:
-    late = milestones(COSMOLOGY, seen(LOW, 400.0))
+    late = marks(LOW, 400.0)
     for name in late.__dataclass_fields__:
         assert math.isnan(getattr(late, name)), name
-    early = milestones(COSMOLOGY, seen(1500.0, HIGH))
+    early = marks(1500.0, HIGH)
     assert math.isnan(early.half_ionized_redshift)
     assert math.isnan(early.visibility_peak_redshift)
 
 
 def test_a_peak_without_both_flanks_has_no_width() -> None:
     for low, high in ((1060.0, HIGH), (LOW, 1130.0)):
-        found = milestones(COSMOLOGY, seen(low, high))
+        found = marks(low, high)
         assert math.isfinite(found.visibility_peak_redshift)
         assert math.isnan(found.visibility_width)
 
 
 def test_half_ionized_twice_takes_the_first_from_above() -> None:
-    growth = dense_growth(math.log1p(LOW), math.log1p(HIGH))
-    electrons = 0.5 - 0.4 * np.cos(growth * 8.0 * np.pi / math.log1p(HIGH))
-    found = milestones(COSMOLOGY, visibility(COSMOLOGY, growth, electrons))
+    grid, _ = panels()
+    electrons = 0.5 - 0.4 * np.cos(-grid.points * 8.0 * np.pi / math.log1p(HIGH))
+    found = milestones(COSMOLOGY, grid, electrons)
     # Rising through 1/2 at 9/16 and 13/16 of ln(1 + z) of the start.
     expected = math.expm1(13.0 / 16.0 * math.log1p(HIGH))
     assert found.half_ionized_redshift == pytest.approx(expected, rel=published(8))
-
-
-def test_short_ranges_still_have_points() -> None:
-    growth = dense_growth(1.0, 1.0001)
-    assert len(growth) == 16
-    assert (growth[0], growth[-1]) == (1.0, 1.0001)

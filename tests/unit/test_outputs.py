@@ -9,10 +9,11 @@ from types import SimpleNamespace
 import numpy as np
 import pytest
 from scipy import constants as si
-from scipy.integrate import cumulative_simpson
+from scipy.integrate import cumulative_simpson, simpson
 
 from levelnet.atomic.bound_bound import einstein_a
 from levelnet.atomic.physics import UNCHANGED
+from levelnet.errors import AccuracyWarning
 from levelnet.history import outputs
 from levelnet.history.atom import build_ladder, lyman_lines
 from levelnet.history.integrate import integrate_history
@@ -191,6 +192,33 @@ def test_diagnostics_are_those_of_this_run() -> None:
     assert 0.0 < figures.interpolation_error <= 1e-8
     assert figures.conservation_error < 1e-12
     assert figures.slowest_relaxation_hubble > 100.0
+
+
+def test_visibility_adds_up_to_all_that_is_scattered() -> None:
+    # int g d eta = 1 - exp(-tau) of the range, over the cosmology's own conformal time; Simpson's
+    # rule on 501 outputs.
+    history = open_history()
+    eta = COSMOLOGY.conformal_time_mpc(history.redshift)
+    scattered = 1.0 - math.exp(-history.optical_depth[0])
+    assert simpson(history.visibility, x=eta) == pytest.approx(scattered, rel=1e-5)
+
+
+def test_a_run_that_ended_at_its_first_output_has_no_milestones() -> None:
+    # Step limit: only the output above the hand-over is there.
+    setup = small_setup(
+        3,
+        grid={"redshift_start": 5000.0, "redshift_end": 20.0, "redshifts": [5000.0, 20.0]},
+        accuracy={"max_steps": 10},
+    )
+    with pytest.warns(AccuracyWarning, match="step limit"):
+        history = solve(setup)
+    assert history.redshift.tolist() == [5000.0]
+    assert history.optical_depth[0] == 0.0
+    # g = n_e sigma_T/(1 + z) where there is no depth yet.
+    electrons = history.free_electron_fraction[0] * COSMOLOGY.hydrogen_density_cm3(5000.0)
+    per_m = electrons * 1e6 * si.value("Thomson cross section") / 5001.0
+    assert history.visibility[0] == pytest.approx(per_m * 1e6 * si.parsec, rel=1e-9)
+    assert all(math.isnan(getattr(history.milestones, k)) for k in history.milestones.__slots__)
 
 
 def test_optical_depth_falls_with_redshift_to_nothing() -> None:
