@@ -88,7 +88,7 @@ def border_symmetric(
         If the Schur complement is not positive definite (an unknown without exit).
     """
     n_inner = coupling.shape[1]
-    response = inner.solve(coupling)
+    response = inner.solve_many(coupling)
     v = weight[n_inner:]
     schur = corner + response @ coupling.T
     schur = 0.5 * (schur + schur.T)
