@@ -167,7 +167,9 @@ def hydrogenic_levels(
     shell = np.arange(top + 1, n_max + 1)
     weight = np.concatenate([2.0 * (2.0 * l + 1.0), 2.0 * shell.astype(float) ** 2])
     binding = binding_energy_ev(n, l, energies, charge)
-    binding = np.concatenate([binding, [_mean_binding_ev(k, energies, charge) for k in shell]])
+    binding = np.concatenate(
+        [binding, [_mean_binding_ev(k, energies, charge) for k in shell.tolist()]]
+    )
     return LevelSet(
         np.concatenate([n, shell]),
         np.concatenate([l, np.full_like(shell, -1)]),

@@ -93,7 +93,8 @@ def _add_block(block: FloatArray, l: int, top: int, shells: Shells) -> None:
         position = np.arange(l + 2, top + 1) * np.arange(l + 1, top) // 2 + l + 1
         shells.to_levels[:, position] += block[row:, :column] * root[:, None]
     first, second = len(n) - (len(block) - row), len(n) - (block.shape[1] - column)
-    shells.among[first:, second:] += block[row:, column:] * np.outer(root[first:], root_above[second:])
+    scale = np.outer(root[first:], root_above[second:])
+    shells.among[first:, second:] += block[row:, column:] * scale
 
 
 def _lowest(lines: DipoleBlocks, top: int) -> DipoleBlocks:

@@ -257,9 +257,7 @@ def _factor_warm(
     return whole, np.concatenate([diagonal, outflow])
 
 
-def _factor_cold(
-    ladder: Ladder, temperature_k: float, sink: FloatArray
-) -> BlockLU | BorderedLU:
+def _factor_cold(ladder: Ladder, temperature_k: float, sink: FloatArray) -> BlockLU | BorderedLU:
     upward, downward = rate_blocks(ladder, temperature_k)
     if not len(ladder.shells):
         return factor_general(ladder.interior.shape, upward, downward, sink)

@@ -6,9 +6,9 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from .. import constants as const
 from ..arrays import FloatArray
 from ..atomic.levels import ionization_scale_ev
+from ..kernels import assembly
 from ..numerics.bordered import BorderRates
 from .ladder import Ladder, lines_of, transition_over_kt
 
@@ -97,32 +97,28 @@ def shell_means(
     """
     inside, shells = ladder.interior, ladder.shells
     blocks = slice(inside.shape.n_unknowns)
-    n, position = inside.n[blocks], inside.position[blocks]
+    position = inside.position[blocks]
     shift = ladder.energy_excess_ev / kt_ev
-    own, other = shift[ladder.shell_position], shift[position]
-    strength = shells.to_levels[:, position] * ~inside.idle[blocks]
-    to_blocks = _with_shift(
-        strength * geometric[np.ix_(shells.n, n)],
-        stretch[np.ix_(shells.n, n)],
-        np.subtract.outer(own, other),
-        np.outer(np.exp(-0.5 * own), np.exp(0.5 * other)),
+    own = shift[ladder.shell_position]
+    to_blocks = np.empty((len(shells), len(position)))
+    assembly.shell_means(
+        shells.n,
+        own,
+        inside.n[blocks],
+        position,
+        shift[position],
+        np.where(inside.idle[blocks], 0.0, 1.0),
+        shells.to_levels,
+        geometric,
+        stretch,
+        to_blocks,
     )
-    rise = np.abs(np.subtract.outer(own, own))
-    rise *= np.sign(np.subtract.outer(own, own)) * np.sign(np.subtract.outer(shells.n, shells.n))
     square = np.ix_(shells.n, shells.n)
-    among = _with_shift(
-        shells.among * geometric[square], stretch[square], rise, np.exp(-0.5 * rise)
-    )
+    # Upper less lower, on both sides of the diagonal.
+    rise = np.subtract.outer(own, own) * np.sign(np.subtract.outer(shells.n, shells.n))
+    a = stretch[square] * rise
+    among = shells.among * geometric[square] * np.exp(-0.5 * rise) * ((2.0 - a) / (2.0 + a))
     return to_blocks, among
-
-
-def _with_shift(
-    mean: FloatArray, stretch: FloatArray, shift: FloatArray, lean: FloatArray
-) -> FloatArray:
-    """Correct non-relativistic means for a shift of the line's energy over kT; lean = e^-shift/2."""
-    a = stretch * shift
-    corrected: FloatArray = mean * lean * ((2.0 - a) / (2.0 + a))
-    return corrected
 
 
 def shell_rates(ladder: Ladder, temperature_k: float) -> BorderRates:

@@ -96,8 +96,9 @@ def _least_climbs_ev(ladder: Ladder) -> FloatArray:
     top = min(ladder.n_max, int(ladder.kept.n.max()) + 2)
     n, l = ladder.levels.n, ladder.levels.l
     reach = np.flatnonzero((n > 1) & (n <= top))
-    shell = l[reach] < 0
-    allowed = (np.abs(np.subtract.outer(l[reach], l[reach])) == 1) | np.logical_or.outer(shell, shell)
+    shell = ladder.levels.shell[reach]
+    allowed = np.abs(np.subtract.outer(l[reach], l[reach])) == 1
+    allowed |= np.logical_or.outer(shell, shell)
     one, other = np.nonzero(allowed & (n[reach][:, None] != n[reach][None, :]))
     start, end = reach[one], reach[other]
     energy, size, kept = ladder.levels.energy_ev, len(n), ladder.kept_position

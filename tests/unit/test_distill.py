@@ -23,7 +23,7 @@ from levelnet.pieces import FolderPieces, MemoryPieces, content_key
 from tests.small_runs import small_setup
 
 SETUP = small_setup(5)
-ATOM = Atom(5, "measured", ((2, 0), (2, 1)))
+ATOM = Atom(5, "measured", ((2, 0), (2, 1)), 5)
 
 
 @lru_cache
@@ -201,7 +201,7 @@ def test_an_error_in_a_worker_comes_through() -> None:
 
 @pytest.mark.parametrize("kept", [((2, 0), (2, 1)), ((2, 0), (2, 1), (3, 0), (3, 1), (3, 2))])
 def test_outline_has_the_constants_of_the_whole_atom(kept: tuple[tuple[int, int], ...]) -> None:
-    atom = Atom(20, "measured", kept)
+    atom = Atom(20, "measured", kept, 20)
     small, whole = nodes.outline(atom), nodes.prepared(atom)
     assert len(small[0].levels) < len(whole[0].levels)
     for name in ("lower", "upper", "barrier_k", "rise_k", "log_weight_ratio", "electron_k"):
