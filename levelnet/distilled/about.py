@@ -45,8 +45,8 @@ def about_lines(table: EffectiveTable) -> list[str]:
         "",
         f"title:       {json.dumps(setup.title)}",
         f"setup:       digest {setup.digest}; hydrogen n_max = {atom.n_max}{resolved}, "
-        f"{atom.energies} energies, Lyman lines {setup.lines.hydrogen} ({setup.lines.lyman_lines}), two-photon "
-        f"decay {setup.lines.two_photon}",
+        f"{atom.energies} energies, Lyman lines {setup.lines.hydrogen} "
+        f"({setup.lines.lyman_lines}), two-photon decay {setup.lines.two_photon}",
         f"constants:   {CODATA_EDITION}; changes in the setup: fine structure "
         f"{setup.physics.fine_structure_change:g}, electron mass "
         f"{setup.physics.electron_mass_change:g}; what follows starts from the measured constants, "
