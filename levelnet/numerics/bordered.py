@@ -88,6 +88,7 @@ def border_symmetric(
         If the Schur complement is not positive definite (an unknown without exit).
     """
     n_inner = coupling.shape[1]
+    _require_exit(excess)
     response = inner.solve_many(coupling)
     v = weight[n_inner:]
     schur = corner + response @ coupling.T
@@ -98,6 +99,12 @@ def border_symmetric(
     if status or not np.isfinite(diagonal).all():
         raise SolveError(f"{Outcome.SINGULAR.value} (border)")
     return BorderedCholesky(inner, response, factor)
+
+
+def _require_exit(exits: FloatArray) -> None:
+    # Of a closed network rounding may leave a positive pivot.
+    if not (np.isfinite(exits).all() and (exits > 0.0).any()):
+        raise SolveError(f"{Outcome.SINGULAR.value} (border)")
 
 
 class BorderRates(NamedTuple):
@@ -190,6 +197,7 @@ def border_general(inner: BlockLU, rates: BorderRates, sink: FloatArray) -> Bord
         If the Schur complement is singular (an unknown without exit).
     """
     n_inner = rates.into.shape[1]
+    _require_exit(sink)
     diagonal = rates.out.sum(axis=1) + rates.among.sum(axis=1) + sink[n_inner:]
     if not np.all(diagonal > 0.0):
         raise SolveError(f"{Outcome.SINGULAR.value} (border)")
