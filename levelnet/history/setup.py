@@ -126,7 +126,7 @@ class Setup:
         if top < n_max and (isinstance(count, str) or count > top - 1):
             raise ValueError(
                 f"lines.lyman_lines = {count!r}: only levels resolved in l can have open Lyman "
-                f"lines; with hydrogen.resolve_l_to = {top} give a number from 1 to {top - 1}"
+                f"lines: with hydrogen.resolve_l_to = {top} give a number from 1 to {top - 1}"
             )
 
     def to_toml(self) -> str:
