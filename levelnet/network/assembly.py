@@ -206,31 +206,49 @@ def factor_interior(
 def _factor_warm(
     ladder: Ladder, temperature_k: float, sink: FloatArray, log_root: FloatArray, work: Workspace
 ) -> tuple[BlockCholesky | BorderedCholesky, FloatArray]:
-    inside = ladder.interior
-    n_blocks, bordered = inside.shape.n_unknowns, len(ladder.shells) > 0
     root = np.exp(log_root)
     kt = const.BOLTZMANN_EV_K * temperature_k
-    geometric, stretch = half_angle_tables(ladder, kt)
-    leak, inner_root = sink[:n_blocks], root[:n_blocks]
-    if bordered:
-        to_blocks, among = shell_means(ladder, geometric, stretch, kt)
-        flow = to_blocks @ inner_root + among @ root[n_blocks:]
-        outflow = flow / root[n_blocks:] + sink[n_blocks:]
-        leak = leak + (root[n_blocks:] @ to_blocks) / inner_root
-    upward, downward, diagonal = np.empty((3, n_blocks))
+    tables = half_angle_tables(ladder, kt)
+    if not len(ladder.shells):
+        return _factor_blocks(ladder, kt, tables, sink, root, work)
+    n_inner = ladder.interior.shape.n_unknowns
+    inner_root, shell_root = root[:n_inner], root[n_inner:]
+    to_blocks, among = shell_means(ladder, *tables, kt)
+    leak = sink[:n_inner] + (shell_root @ to_blocks) / inner_root
+    blocks, diagonal = _factor_blocks(ladder, kt, tables, leak, inner_root, work)
+    outflow = (to_blocks @ inner_root + among @ shell_root) / shell_root + sink[n_inner:]
+    diagonal = np.concatenate([diagonal, outflow])
+    scale = np.sqrt(diagonal)
+    to_blocks /= np.outer(scale[n_inner:], scale[:n_inner])
+    among /= np.outer(scale[n_inner:], scale[n_inner:])
+    whole = border_symmetric(blocks, to_blocks, among, root * scale, sink * root / scale)
+    return whole, diagonal
+
+
+def _factor_blocks(
+    ladder: Ladder,
+    kt_ev: float,
+    tables: tuple[FloatArray, FloatArray],
+    sink: FloatArray,
+    root: FloatArray,
+    work: Workspace,
+) -> tuple[BlockCholesky, FloatArray]:
+    """Factor the blocks of levels resolved in l; what they lose to whole shells is in `sink`."""
+    inside = ladder.interior
+    blocks = slice(inside.shape.n_unknowns)
+    upward, downward, diagonal = np.empty((3, inside.shape.n_unknowns))
     symmetric_blocks(
         ladder.resolve_l_to,
         inside.first_n,
         ladder.dipole.strength_per_s,
         ladder.dipole.offset,
-        geometric,
-        stretch,
+        *tables,
         inside.shape.start,
         inside.shape.coupling_start,
-        inner_root,
-        ladder.energy_excess_ev[inside.position[:n_blocks]] / kt,
-        np.where(inside.idle[:n_blocks], 0.0, 1.0),
-        leak,
+        root,
+        ladder.energy_excess_ev[inside.position[blocks]] / kt_ev,
+        np.where(inside.idle[blocks], 0.0, 1.0),
+        sink,
         upward,
         downward,
         diagonal,
@@ -240,21 +258,9 @@ def _factor_warm(
         raise SolveError(Outcome.SINGULAR.value)
     scale = np.sqrt(diagonal)
     solver = factor_symmetric(
-        inside.shape,
-        work.coupling,
-        inner_root * scale,
-        downward,
-        leak * inner_root / scale,
-        work.factor,
+        inside.shape, work.coupling, root * scale, downward, sink * root / scale, work.factor
     )
-    if not bordered:
-        return solver, diagonal
-    high = np.sqrt(outflow)
-    to_blocks /= np.outer(high, scale)
-    among /= np.outer(high, high)
-    scale = np.concatenate([scale, high])
-    whole = border_symmetric(solver, to_blocks, among, root * scale, sink * root / scale)
-    return whole, np.concatenate([diagonal, outflow])
+    return solver, diagonal
 
 
 def _factor_cold(ladder: Ladder, temperature_k: float, sink: FloatArray) -> BlockLU | BorderedLU:
