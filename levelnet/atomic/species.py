@@ -42,8 +42,7 @@ class Hydrogen:
         """Check the rules about several fields."""
         if self.highest_resolved > self.n_max:
             raise ValueError(
-                f"hydrogen.resolve_l_to = {self.resolve_l_to}: allowed are 2 to "
-                f"n_max = {self.n_max}"
+                f"resolve_l_to = {self.resolve_l_to}: allowed are 2 to n_max = {self.n_max}"
             )
 
     @property

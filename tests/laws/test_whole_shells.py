@@ -185,9 +185,10 @@ def test_both_forms_agree_where_both_hold(monkeypatch: pytest.MonkeyPatch) -> No
     )
 
 
-def test_cold_field() -> None:
+@pytest.mark.parametrize("top", [2, 3, 10])
+def test_cold_field(top: int) -> None:
     # What recombines at 20 K ends in 2s or 2p; chances over all exits sum to 1.
-    ladder = hydrogen_ladder(50, "measured", TWO, 10)
+    ladder = hydrogen_ladder(50, "measured", TWO, top)
     for kelvin in (2.7, 20.0):
         factored = factor_interior(ladder, kelvin)
         chances = factored.fates(np.vstack([factored.to_kept, factored.photoionization]))

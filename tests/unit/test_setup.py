@@ -127,7 +127,7 @@ def test_digest_names_the_setup() -> None:
         ({"hydrogen": {"n_max": 10, "resolve_l_to": 1}}, ["hydrogen.resolve_l_to = 1", "2"]),
         (
             {"hydrogen": {"n_max": 10, "resolve_l_to": 11}},
-            ["hydrogen.resolve_l_to = 11: allowed are 2 to n_max = 10"],
+            ["hydrogen: resolve_l_to = 11: allowed are 2 to n_max = 10"],
         ),
         ({"hydrogen": {"n_max": 10, "resolve_l_to": 5.5}}, ["resolve_l_to = 5.5", "integer"]),
         (
