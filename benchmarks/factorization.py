@@ -6,10 +6,17 @@ Both factor the same physical matrix: ours as scaled symmetric blocks (block Cho
 conserving diagonal), the rival (SuperLU through scipy.sparse.linalg.splu, default ordering) as CSC.
 "of dgemm" is our rate, 7/12 n_max^4 operations over the time, over that of a 1536^3 dgemm timed in
 between.
+
+    python -m benchmarks.factorization shells
+
+What whole shells cost: one reduction (assembly, elimination, border, fates of 2s and 2p) over that
+of the same n_max with every level resolved in l; and what they change: the effective recombination
+coefficient onto 2s and 2p together, at 3000 and 300 K.
 """
 
 from __future__ import annotations
 
+import functools
 import sys
 
 from benchmarks.timing import best_of, cpu_seconds, machine, matrix_product  # first: pins threads
@@ -20,9 +27,13 @@ from scipy.sparse.linalg import splu
 
 from levelnet.network import assembly
 from levelnet.network.ladder import Ladder, hydrogen_ladder
+from levelnet.network.reduction import exchange_pairs, reduce_at
+from levelnet.network.tabulation import live_reduction
 
 TEMPERATURE_K = 3000.0
 LARGEST_FOR_RIVAL = 300
+# n_max, then where l is resolved to.
+SHELLS = ((100, (99, 90, 70, 50, 30, 10, 2)), (300, (150, 100, 50, 30, 10)))
 
 
 def factor_inputs(ladder: Ladder, temperature_k: float) -> tuple[tuple, np.ndarray]:
@@ -79,7 +90,32 @@ def report(n_max: int) -> None:
     )
 
 
+def report_shells(n_max: int, tops: tuple[int, ...]) -> None:
+    """Print the cost with whole shells above each of `tops`."""
+    two = ((2, 0), (2, 1))
+    ladders = [hydrogen_ladder(n_max, "measured", two, top) for top in (n_max, *tops)]
+    inputs = [(a, exchange_pairs(a), TEMPERATURE_K, assembly.Workspace.of(a)) for a in ladders]
+    actions = [functools.partial(reduce_at, *one) for one in inputs]
+    times = best_of(actions, 20 if n_max <= 100 else 5)
+    captured = [
+        [live_reduction(a).rates(kelvin, kelvin).recombination.sum() for kelvin in (3000.0, 300.0)]
+        for a in ladders
+    ]
+    for ladder, own, capture in zip(ladders, times, captured, strict=True):
+        change = np.array(capture) / captured[0] - 1.0
+        print(
+            f"n_max {n_max}, l to {ladder.resolve_l_to:3d}: {len(ladder.shells):3d} shells, "
+            f"{own / times[0]:5.3f} of resolved, {1e3 * own:7.2f} ms | recombination "
+            f"{change[0]:+.1e} at 3000 K, {change[1]:+.1e} at 300 K",
+            flush=True,
+        )
+
+
 if __name__ == "__main__":
     print(machine())
+    if sys.argv[1:] == ["shells"]:
+        for highest, resolved in SHELLS:
+            report_shells(highest, resolved)
+        sys.exit()
     for size in [int(argument) for argument in sys.argv[1:]] or [10, 20, 30, 50, 100, 200, 300]:
         report(size)

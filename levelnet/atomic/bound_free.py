@@ -54,7 +54,8 @@ class BoundFree:
     grid : ElectronGrid
         The quadrature rule.
     cross_section_cm2 : tuple of ndarray, cm^2
-        Element n - 1 has shape (n, n_nodes), l along the first axis; read-only.
+        Element n - 1 has shape (n, n_nodes), l along the first axis, or (1, n_nodes) for a whole
+        shell; read-only.
     """
 
     n_max: int

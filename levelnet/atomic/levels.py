@@ -12,7 +12,12 @@ from ..errors import InputError
 
 
 def level_name(n: int, l: int) -> str:
-    """Spectroscopic name of a level: "2s", "3d"; letters after s, p, d run from f without j."""
+    """Spectroscopic name of a level: "2s", "3d", or "n=60" for a whole shell (l = -1).
+
+    Letters after s, p, d run from f without j.
+    """
+    if l < 0:
+        return f"n={n}"
     letters = "spdfghiklmnoqrtuvwxyz"
     return f"{n}{letters[l]}" if l < len(letters) else f"{n}[l={l}]"
 
@@ -136,9 +141,46 @@ class LevelSet:
         return int(found[0])
 
 
-def hydrogenic_levels(n_max: int, energies: str = "nonrelativistic", charge: int = 1) -> LevelSet:
-    """Every level (n, l) with 1 <= n <= n_max, ordered by n and then l."""
-    n = np.repeat(np.arange(1, n_max + 1), np.arange(1, n_max + 1))
-    l = np.concatenate([np.arange(k) for k in range(1, n_max + 1)])
+def hydrogenic_levels(
+    n_max: int,
+    energies: str = "nonrelativistic",
+    charge: int = 1,
+    resolve_l_to: int | None = None,
+) -> LevelSet:
+    """Every level (n, l) with 1 <= n <= n_max, ordered by n and then l.
+
+    Parameters
+    ----------
+    n_max : int
+        Highest n.
+    energies : "measured" or "nonrelativistic"
+        As for :func:`binding_energy_ev`.
+    charge : int
+        Nuclear charge.
+    resolve_l_to : int, optional
+        Above this n whole shells stand in place of levels, each at the mean energy of its levels
+        by weight.
+    """
+    top = n_max if resolve_l_to is None else resolve_l_to
+    n = np.repeat(np.arange(1, top + 1), np.arange(1, top + 1))
+    l = np.concatenate([np.arange(k) for k in range(1, top + 1)])
+    shell = np.arange(top + 1, n_max + 1)
+    weight = np.concatenate([2.0 * (2.0 * l + 1.0), 2.0 * shell.astype(float) ** 2])
     binding = binding_energy_ev(n, l, energies, charge)
-    return LevelSet(n, l, 2.0 * (2.0 * l + 1.0), binding[0] - binding, binding)
+    binding = np.concatenate(
+        [binding, [_mean_binding_ev(k, energies, charge) for k in shell.tolist()]]
+    )
+    return LevelSet(
+        np.concatenate([n, shell]),
+        np.concatenate([l, np.full_like(shell, -1)]),
+        weight,
+        binding[0] - binding,
+        binding,
+    )
+
+
+def _mean_binding_ev(n: int, energies: str, charge: int) -> float:
+    l = np.arange(n)
+    return float(
+        np.average(binding_energy_ev(np.full_like(l, n), l, energies, charge), weights=2 * l + 1)
+    )

@@ -116,11 +116,12 @@ def chosen_setup(table: EffectiveTable, options: argparse.Namespace) -> Setup:
 
     if options.setup is not None:
         setup = load_setup(options.setup)
-        for name in ("n_max", "energies"):
+        for name in ("n_max", "energies", "highest_resolved"):
             asked, there = getattr(setup.hydrogen, name), getattr(table.setup.hydrogen, name)
             if asked != there:
+                shown = "resolve_l_to" if name == "highest_resolved" else name
                 raise InputError(
-                    f"{options.setup}: hydrogen.{name} = {asked}, but the table {options.table} "
+                    f"{options.setup}: hydrogen.{shown} = {asked}, but the table {options.table} "
                     f"was distilled with {there}"
                 )
         return setup

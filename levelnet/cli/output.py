@@ -12,6 +12,7 @@ from ..constants import SECONDS_PER_YEAR
 if TYPE_CHECKING:
     from ..arrays import FloatArray
     from ..history.result import History
+    from ..history.setup import Setup
 
 _SAMPLES = (1700.0, 1400.0, 1300.0, 1200.0, 1100.0, 1000.0, 800.0, 500.0, 200.0, 100.0, 50.0, 20.0)
 _CHANNELS_SHOWN = 6
@@ -78,6 +79,7 @@ def history_values(history: History) -> dict[str, Any]:
         "ok": history.outcome.ok,
         "outcome_text": history.outcome.value,
         "hydrogen_n_max": setup.hydrogen.n_max,
+        "hydrogen_resolve_l_to": setup.hydrogen.highest_resolved,
         "n_levels": {one.name: len(one.levels) for one in history.species},
         "n_redshifts": len(history.redshift),
         "milestones": {name: getattr(marks, name) for name in marks.__slots__},
@@ -99,6 +101,12 @@ def history_values(history: History) -> dict[str, Any]:
     }
 
 
+def atom_size(setup: Setup) -> str:
+    """Return highest n of hydrogen, and up to where it is resolved in l if not all the way."""
+    n_max, top = setup.hydrogen.n_max, setup.hydrogen.highest_resolved
+    return f"n_max = {n_max}" + (f", whole shells above n = {top}" if top < n_max else "")
+
+
 def summary_text(history: History) -> str:
     """Return the summary of a history as lines of plain text."""
     setup = history.setup
@@ -107,7 +115,7 @@ def summary_text(history: History) -> str:
         setup.title or "(no title)",
         row(
             "setup",
-            f"{setup.digest}: hydrogen n_max = {setup.hydrogen.n_max} ({n_levels} levels), "
+            f"{setup.digest}: hydrogen {atom_size(setup)} ({n_levels} levels), "
             f"lines {setup.lines.hydrogen}, z = {history.redshift[0]:g} to "
             f"{history.redshift[-1]:g} ({len(history.redshift)} outputs)",
         ),

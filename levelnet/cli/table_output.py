@@ -5,7 +5,7 @@ from __future__ import annotations
 import math
 from typing import TYPE_CHECKING, Any
 
-from .output import aligned, row
+from .output import aligned, atom_size, row
 
 if TYPE_CHECKING:
     from ..distilled.history import FastHistory
@@ -26,6 +26,7 @@ def table_values(table: EffectiveTable) -> dict[str, Any]:
         "title": setup.title,
         "setup_digest": setup.digest,
         "hydrogen_n_max": setup.hydrogen.n_max,
+        "hydrogen_resolve_l_to": setup.hydrogen.highest_resolved,
         "kept_levels": level_names(table.kept),
         "tolerance": table.tolerance,
         "radiation_temperature_range_k": list(table.radiation_range_k),
@@ -58,7 +59,7 @@ def table_summary(table: EffectiveTable) -> str:
         table.setup.title or "(no title)",
         row(
             "effective rates",
-            f"setup {values['setup_digest']}: hydrogen n_max = {values['hydrogen_n_max']}, kept "
+            f"setup {values['setup_digest']}: hydrogen {atom_size(table.setup)}, kept "
             + ", ".join(values["kept_levels"]),
         ),
         row("range", f"T_r = {low:g} to {high:g} K, T_m/T_r = {least:g} to {most:g}"),

@@ -36,15 +36,17 @@ def about_lines(table: EffectiveTable) -> list[str]:
     """
     setup = table.setup
     atom = setup.hydrogen
+    top = atom.highest_resolved
+    resolved = f" (whole shells above n = {top})" if top < atom.n_max else ""
     # By its name, since nothing down here may import the top of the package.
     version = import_module("levelnet").__version__
     said = [
         f"Effective rates of hydrogen, made by levelnet {version}; do not edit.",
         "",
         f"title:       {json.dumps(setup.title)}",
-        f"setup:       digest {setup.digest}; hydrogen n_max = {atom.n_max}, {atom.energies} "
-        f"energies, Lyman lines {setup.lines.hydrogen} ({setup.lines.lyman_lines}), two-photon "
-        f"decay {setup.lines.two_photon}",
+        f"setup:       digest {setup.digest}; hydrogen n_max = {atom.n_max}{resolved}, "
+        f"{atom.energies} energies, Lyman lines {setup.lines.hydrogen} "
+        f"({setup.lines.lyman_lines}), two-photon decay {setup.lines.two_photon}",
         f"constants:   {CODATA_EDITION}; changes in the setup: fine structure "
         f"{setup.physics.fine_structure_change:g}, electron mass "
         f"{setup.physics.electron_mass_change:g}; what follows starts from the measured constants, "

@@ -97,7 +97,7 @@ def distill(  # noqa: PLR0913  choices by name, each with a default
         raise InputError(f"tolerance = {tolerance:g}: allowed are {TIGHTEST:g} to {LOOSEST:g}")
     _check_memory(setup, executor)
     tell = progress or (lambda stage, fraction: None)
-    atom = Atom(setup.hydrogen.n_max, setup.hydrogen.energies, choice)
+    atom = Atom.of(setup.hydrogen, choice)
     tell("atomic data", 0.0)
     with threadpool_limits(limits=1, user_api="blas"):
         constants = outline(atom)[2]

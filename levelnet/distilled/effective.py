@@ -105,7 +105,7 @@ def effective_rates(
     Ali-Haimoud & Hirata 2010, Phys. Rev. D 82, 063521; Burgin 2009, Bull. Lebedev Phys. Inst. 36,
     110.
     """
-    atom = Atom(setup.hydrogen.n_max, setup.hydrogen.energies, choose_kept(setup, kept))
+    atom = Atom.of(setup.hydrogen, choose_kept(setup, kept))
     check_memory(setup)
     factor = scales(setup.physics)
     radiation, matter = np.broadcast_arrays(

@@ -41,14 +41,17 @@ def choose_kept(setup: Setup, kept: Iterable[tuple[int, int]] | None) -> KeptCho
     needed = needed_levels(setup)
     if kept is None:
         return tuple(sorted(needed))
-    n_max = setup.hydrogen.n_max
+    top = setup.hydrogen.highest_resolved
     try:
         chosen = {(operator.index(n), operator.index(l)) for n, l in kept}
     except (TypeError, ValueError):
         raise InputError("kept: give pairs of whole numbers (n, l)") from None
-    bad = sorted(level for level in chosen if not 2 <= level[0] <= n_max or not _l_fits(level))
+    bad = sorted(level for level in chosen if not 2 <= level[0] <= top or not _l_fits(level))
     if bad:
-        raise InputError(f"kept = {bad[0]}: allowed are (n, l) with 2 <= n <= {n_max}, 0 <= l < n")
+        raise InputError(
+            f"kept = {bad[0]}: allowed are (n, l) with 2 <= n <= {top}, 0 <= l < n"
+            + (", resolved in l" if top < setup.hydrogen.n_max else "")
+        )
     missing = sorted(set(needed) - chosen)
     if missing:
         raise InputError(

@@ -26,6 +26,7 @@ import numpy as np
 from threadpoolctl import threadpool_limits
 
 from ..arrays import FloatArray
+from ..atomic.species import Hydrogen
 from ..errors import SolveError
 from ..network.ladder import Ladder, hydrogen_ladder
 from ..network.rates import RateConstants, rate_constants, stack
@@ -50,23 +51,38 @@ class Atom:
         "measured" or "nonrelativistic".
     kept : tuple of (n, l)
         Kept levels.
+    resolve_l_to : int
+        Highest n with levels resolved in l.
     """
 
     n_max: int
     energies: str
     kept: KeptChoice
+    resolve_l_to: int
+
+    @staticmethod
+    def of(hydrogen: Hydrogen, kept: KeptChoice) -> Atom:
+        """Hydrogen of a setup with these kept levels."""
+        return Atom(hydrogen.n_max, hydrogen.energies, kept, hydrogen.highest_resolved)
+
+    def ladder(self, n_max: int | None = None) -> Ladder:
+        """Build the ladder, or its part up to `n_max`."""
+        top = n_max or self.n_max
+        return hydrogen_ladder(top, self.energies, self.kept, min(self.resolve_l_to, top))
 
     @property
     def name(self) -> str:
         """Content name of the atom with the code that computes it."""
         code = code_digest(("constants", "kernels", "numerics", "atomic", "network"))
-        return content_key("distilled node", code, self.n_max, self.energies, self.kept)
+        return content_key(
+            "distilled node", code, self.n_max, self.energies, self.kept, self.resolve_l_to
+        )
 
 
 @functools.lru_cache(maxsize=1)
 def prepared(atom: Atom) -> tuple[Ladder, Pairs, RateConstants]:
     """The ladder of an atom, its pairs of kept levels and its constants; built once a process."""
-    ladder = hydrogen_ladder(atom.n_max, atom.energies, atom.kept)
+    ladder = atom.ladder()
     pairs = exchange_pairs(ladder)
     return ladder, pairs, rate_constants(ladder, pairs)
 
@@ -79,7 +95,7 @@ def outline(atom: Atom) -> tuple[Ladder, Pairs, RateConstants]:
     hands out work need not hold the whole atom.
     """
     top = min(atom.n_max, max(n for n, _ in atom.kept) + 2)
-    ladder = hydrogen_ladder(top, atom.energies, atom.kept)
+    ladder = atom.ladder(top)
     pairs = exchange_pairs(ladder)
     return ladder, pairs, rate_constants(ladder, pairs)
 

@@ -181,7 +181,13 @@ def _constants(ionization_ev: float) -> FloatArray:
 def _line_count(table: EffectiveTable, lines: Lines) -> int:
     """Lines asked for, all of which must start from a kept level."""
     wanted = lines.lyman_lines
-    count = table.setup.hydrogen.n_max - 1 if isinstance(wanted, str) else int(wanted)
+    atom = table.setup.hydrogen
+    if isinstance(wanted, str) and atom.highest_resolved < atom.n_max:
+        raise InputError(
+            f"lines.lyman_lines = {wanted!r}: only levels resolved in l can have open Lyman lines, "
+            f"and this table has whole shells above n = {atom.highest_resolved}; give a number"
+        )
+    count = atom.n_max - 1 if isinstance(wanted, str) else int(wanted)
     kept = set(zip(table.kept.n.tolist(), table.kept.l.tolist(), strict=True))
     missing = [n for n in range(2, count + 2) if (n, 1) not in kept]
     if missing:

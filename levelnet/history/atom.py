@@ -38,7 +38,8 @@ def build_ladder(
     count = min(open_lyman_lines(setup), top - 1)
     kept = {(2, 0), *((n, 1) for n in range(2, count + 2))}
     kept |= {level for level in keeps if level[0] <= top}
-    return hydrogen_ladder(top, setup.hydrogen.energies, tuple(kept))
+    resolved = min(setup.hydrogen.highest_resolved, top)
+    return hydrogen_ladder(top, setup.hydrogen.energies, tuple(kept), resolved)
 
 
 def lyman_lines(ladder: Ladder, count: int | None = None) -> ResonanceLines:

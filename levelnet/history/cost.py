@@ -14,9 +14,12 @@ from .setup import Setup
 _FLOP_PER_S = 2.0e10
 _SECONDS_PER_BLOCK = 6e-5
 _SECONDS_PER_EVALUATION = 2.5e-4
+_SECONDS_PER_BORDER_LINE = 1e-8
 _EVALUATIONS = 4000
 HIGHEST_N = 1000
 _RESERVE_BYTES = 3e8
+# Arrays over shells and resolved levels alive at once: strengths, rates, response, work space.
+_BORDERS = 6.0
 
 
 @dataclass(frozen=True, slots=True)
@@ -39,17 +42,27 @@ def estimate(setup: Setup) -> Cost:
     """Estimate memory and time of a run from its sizes.
 
     Three cubes of n_max^3/3 numbers (line strengths, couplings, factors), the cross sections, and
-    the populations at every output redshift.
+    the populations at every output redshift. With whole shells, the strengths of every line are
+    needed still, to be averaged; the cubes of what is resolved, and the border, come on top.
     """
-    n = setup.hydrogen.n_max
+    n, top = setup.hydrogen.n_max, setup.hydrogen.highest_resolved
     n_out = len(setup.grid.redshifts or ()) or setup.grid.n_redshifts
-    cubes = 3 * 8.0 * n**3 / 3.0
-    memory = cubes + 400.0 * n**2 + 5 * 8.0 * n_out * n**2 / 2.0 + _RESERVE_BYTES
+    border = (n - top) * top**2 / 2.0
+    cubes = 8.0 * (n**3 + (2.0 if top == n else 3.0) * top**3) / 3.0 + _BORDERS * 8.0 * border
+    populations = 5 * 8.0 * n_out * (top**2 / 2.0 + n - top)
+    memory = cubes + 400.0 * n**2 + populations + _RESERVE_BYTES
     low = setup.cosmology.cmb_temperature_k * (1.0 + setup.grid.redshift_end)
     nodes = node_count(low, 6000.0, table_tolerance(setup)) + 7 if setup.accuracy.interpolate else 0
-    node = 7.0 / 12.0 * n**4 / _FLOP_PER_S + 3.0 * n**3 / 1e9 + _SECONDS_PER_BLOCK * n
+    node = 7.0 / 12.0 * top**4 / _FLOP_PER_S + 3.0 * top**3 / 1e9 + _SECONDS_PER_BLOCK * top
+    node += _border_seconds(top, n - top)
     evaluation = _SECONDS_PER_EVALUATION if setup.accuracy.interpolate else 5.0 * node
     return Cost(memory, (nodes + n_out) * node + _EVALUATIONS * evaluation + 1e-8 * n**3)
+
+
+def _border_seconds(top: int, n_shells: int) -> float:
+    """Time of the border at one T_r: assembly, one right side for each shell, the corner."""
+    flop = 2.0 * n_shells * top**3 + n_shells**2 * top**2 + n_shells**3 / 3.0
+    return flop / _FLOP_PER_S + n_shells * top**2 / 2.0 * _SECONDS_PER_BORDER_LINE
 
 
 def table_tolerance(setup: Setup) -> float:

@@ -85,6 +85,13 @@ def _notes(setup: Setup, chosen: LineTreatment) -> tuple[str, ...]:
         "excited levels are quasi-steady; there are no collisions and no reionization",
         f'lines: "{chosen.name}" ({type(chosen).__module__}.{type(chosen).__qualname__})',
     ]
+    top, n_max = setup.hydrogen.highest_resolved, setup.hydrogen.n_max
+    if top < n_max:
+        notes.insert(
+            2,
+            f"shells n = {top + 1} to {n_max} are populated by statistical weight over l "
+            f"(resolve_l_to = {top})",
+        )
     notes += [f"lines assume: {text}" for text in chosen.assumes]
     notes += [f"lines hold for: {text}" for text in chosen.holds_for]
     if setup.lines.two_photon == "stimulated":

@@ -122,6 +122,12 @@ class Setup:
                 f"lines.lyman_lines = {count}: hydrogen.n_max = {n_max} has only "
                 f"{n_max - 1} Lyman lines"
             )
+        top = self.hydrogen.highest_resolved
+        if top < n_max and (isinstance(count, str) or count > top - 1):
+            raise ValueError(
+                f"lines.lyman_lines = {count!r}: only levels resolved in l can have open Lyman "
+                f"lines: with hydrogen.resolve_l_to = {top} give a number from 1 to {top - 1}"
+            )
 
     def to_toml(self) -> str:
         """Write the setup as TOML text; :func:`parse_setup` gives it back equal."""

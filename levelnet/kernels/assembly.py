@@ -134,3 +134,41 @@ def symmetric_blocks(
             begin = coupling_start[l] + i * above
             for j in range(above):
                 coupling[begin + j] *= scale * upward[start[l + 1] + j]
+
+
+@kernel
+def shell_means(
+    shell_n: IntArray,
+    shell_shift: FloatArray,
+    n: IntArray,
+    position: IntArray,
+    shift: FloatArray,
+    live: FloatArray,
+    strength: FloatArray,
+    geometric: FloatArray,
+    stretch: FloatArray,
+    out: FloatArray,
+) -> None:
+    """Fill the geometric means of both directions of every line from a whole shell down.
+
+    Parameters
+    ----------
+    shell_n, shell_shift : ndarray, shape (n_shells,)
+        Principal quantum number; energy above the non-relativistic one over kT.
+    n, position, shift, live : ndarray, shape (n_lower,)
+        The same of the levels below, where they stand in `strength`, and 0 for one that takes no
+        part, else 1.
+    strength : ndarray, shape (n_shells, n_levels)
+        A sqrt(g_u/g_l) in s^-1.
+    geometric, stretch : ndarray, shape (n_max + 1, n_max + 1)
+        As for :func:`symmetric_blocks`, with the same expansion in the fine structure.
+    out : ndarray, shape (n_shells, n_lower)
+        The means, s^-1.
+    """
+    root = np.exp(0.5 * shift) * live
+    for s in range(shell_n.shape[0]):
+        own, lean = shell_shift[s], math.exp(-0.5 * shell_shift[s])
+        for i in range(n.shape[0]):
+            a = stretch[shell_n[s], n[i]] * (own - shift[i])
+            mean = strength[s, position[i]] * geometric[shell_n[s], n[i]] * lean * root[i]
+            out[s, i] = mean * ((2.0 - a) / (2.0 + a))

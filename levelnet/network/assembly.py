@@ -4,7 +4,8 @@ Symmetric form. With Boltzmann weights w_i = g_i exp(-E_i/kT_r) detailed balance
 R_ji w_j, and the geometric mean of both directions of a line is S = A sqrt(g_u/g_l) / (2 sinh(h nu
 / 2kT_r)). The row matrix A = D - R (D total outflow) is then A = V^-1 D^1/2 H D^1/2 V with V =
 diag(sqrt w) and H = 1 - D^-1/2 S D^-1/2, symmetric positive definite. Below COLD_K the weights
-leave the doubles and the same matrix is factored without symmetry.
+leave the doubles and the same matrix is factored without symmetry. Whole shells stand last, as a
+border of the blocks.
 """
 
 from __future__ import annotations
@@ -19,33 +20,26 @@ from ..arrays import FloatArray
 from ..atomic.bound_free import recombination_weights
 from ..atomic.detailed_balance import log_saha_factor, thermal_volume_cm3
 from ..atomic.electron_grid import maxwell_factor
-from ..atomic.levels import ionization_scale_ev
 from ..errors import Outcome, SolveError
 from ..kernels.assembly import symmetric_blocks
 from ..numerics.block_cholesky import BlockCholesky, factor_symmetric
 from ..numerics.block_lu import BlockLU, factor_general
-from .ladder import Ladder, lines_of, transition_over_kt
+from ..numerics.bordered import BorderedCholesky, BorderedLU, border_general, border_symmetric
+from .ladder import Ladder, line_groups
+from .line_rates import (
+    KeptLines,
+    half_angle_tables,
+    kept_line_rates,
+    log_line_rates,
+    shell_means,
+    shell_rates,
+)
+
+Solver = BlockCholesky | BlockLU | BorderedCholesky | BorderedLU
 
 # sqrt(w) spans e^(1.51 eV / 2kT), which reaches e^320 here; doubles end at e^709 and products of
 # two such factors occur.
 COLD_K = 27.4
-
-
-@dataclass(frozen=True, slots=True, eq=False)
-class KeptLines:
-    """Rates between one kept level and its dipole partners, at one T_r.
-
-    Attributes
-    ----------
-    position : ndarray of int, shape (n_partners,)
-        Where the partners stand in the LevelSet.
-    log_out, log_in : ndarray, shape (n_partners,)
-        ln of the rate from the kept level to the partner, and back, in s^-1.
-    """
-
-    position: np.ndarray
-    log_out: FloatArray
-    log_in: FloatArray
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -64,8 +58,8 @@ class FactoredInterior:
         Rates from the interior to each kept level.
     photoionization : ndarray, shape (n_unknowns,), s^-1
         Rates to the continuum.
-    solver : BlockCholesky or BlockLU
-        The factors.
+    solver : Solver
+        The factors: symmetric or general, with a border where there are whole shells.
     diagonal : ndarray, shape (n_unknowns,), s^-1
         Total outflow of each level.
     log_root_weight : ndarray, shape (n_unknowns,)
@@ -77,7 +71,7 @@ class FactoredInterior:
     kept_lines: tuple[KeptLines, ...]
     to_kept: FloatArray
     photoionization: FloatArray
-    solver: BlockCholesky | BlockLU
+    solver: Solver
     diagonal: FloatArray
     log_root_weight: FloatArray
 
@@ -94,7 +88,7 @@ class FactoredInterior:
         ndarray, shape (n_right, n_unknowns), dimensionless
             Probabilities; over all exits they sum to 1.
         """
-        if isinstance(self.solver, BlockLU):
+        if isinstance(self.solver, BlockLU | BorderedLU):
             return self.solver.solve(rates)
         root = np.exp(self.log_root_weight)
         scale = np.sqrt(self.diagonal)
@@ -106,7 +100,7 @@ class FactoredInterior:
 
         Sources are per second; where a level has none, -inf.
         """
-        if isinstance(self.solver, BlockLU):
+        if isinstance(self.solver, BlockLU | BorderedLU):
             top = log_source.max()
             cold: FloatArray = self.solver.solve_transposed(np.exp(log_source - top)[None])[0]
             with np.errstate(divide="ignore"):
@@ -155,9 +149,8 @@ def recombination_coefficients(
     spread = maxwell_factor(ladder.bound_free.grid, matter_temperature_k, ladder.charge)
     weights = recombination_weights(ladder.bound_free, radiation_temperature_k) * spread
     alpha = np.zeros(len(ladder.levels))
-    for n in range(2, ladder.n_max + 1):
-        first = n * (n - 1) // 2
-        alpha[first : first + n] = ladder.bound_free.cross_section_cm2[n - 1] @ weights[n - 1]
+    for n, place in ladder.by_n():
+        alpha[place] = ladder.bound_free.cross_section_cm2[n - 1] @ weights[n - 1]
     volume = thermal_volume_cm3(matter_temperature_k, ladder.charge)
     return alpha * (0.5 * ladder.levels.statistical_weight * volume)
 
@@ -198,10 +191,10 @@ def factor_interior(
     energy = ladder.levels.energy_ev[inside.position]
     weight = ladder.levels.statistical_weight[inside.position]
     log_root = 0.5 * (np.log(weight) - (energy - energy.min(initial=np.inf)) / kt)
-    solver: BlockCholesky | BlockLU
+    solver: Solver
     if radiation_temperature_k < COLD_K:
-        solver = _factor_cold(ladder, radiation_temperature_k, sink)
-        diagonal = solver.diagonal
+        cold = _factor_cold(ladder, radiation_temperature_k, sink)
+        solver, diagonal = cold, cold.diagonal
     else:
         work = workspace or Workspace.of(ladder)
         solver, diagonal = _factor_warm(ladder, radiation_temperature_k, sink, log_root, work)
@@ -210,58 +203,51 @@ def factor_interior(
     )
 
 
-def kept_line_rates(ladder: Ladder, kept: int, temperature_k: float) -> KeptLines:
-    """Rates of every line between one kept level and the other excited levels."""
-    own = int(ladder.kept_position[kept])
-    position, strength = lines_of(ladder, int(ladder.kept.n[kept]), int(ladder.kept.l[kept]))
-    rises = ladder.levels.n[position] > ladder.levels.n[own]
-    lower, upper = np.where(rises, own, position), np.where(rises, position, own)
-    log_up, log_down = log_line_rates(ladder, lower, upper, strength, temperature_k)
-    return KeptLines(position, np.where(rises, log_up, log_down), np.where(rises, log_down, log_up))
-
-
-def log_line_rates(
-    ladder: Ladder,
-    lower: np.ndarray,
-    upper: np.ndarray,
-    strength: FloatArray,
-    temperature_k: float,
-) -> tuple[FloatArray, FloatArray]:
-    """Ln of the rates up and down of lines in a blackbody, s^-1.
-
-    The same expansion in the fine structure as the compiled assembly: exact in the Boltzmann
-    factor, third order in the occupation number.
-    """
-    plain, actual = transition_over_kt(ladder, lower, upper, temperature_k)
-    # 1/(2 sinh(x/2)) = e^(-x/2) / (1 - e^-x): the first factor exact, the second expanded.
-    a = (actual - plain) * np.exp(-plain) / -np.expm1(-plain)
-    mean = np.log(strength) - np.log(-np.expm1(-plain)) - 0.5 * actual + np.log((2 - a) / (2 + a))
-    weight = ladder.levels.statistical_weight
-    half_ratio = 0.5 * (np.log(weight[upper] / weight[lower]) - actual)
-    return mean + half_ratio, mean - half_ratio
-
-
 def _factor_warm(
     ladder: Ladder, temperature_k: float, sink: FloatArray, log_root: FloatArray, work: Workspace
-) -> tuple[BlockCholesky, FloatArray]:
-    inside = ladder.interior
+) -> tuple[BlockCholesky | BorderedCholesky, FloatArray]:
     root = np.exp(log_root)
     kt = const.BOLTZMANN_EV_K * temperature_k
-    geometric, stretch = _half_angle_tables(ladder, kt)
-    n_unknowns = inside.shape.n_unknowns
-    upward, downward, diagonal = np.empty((3, n_unknowns))
+    tables = half_angle_tables(ladder, kt)
+    if not len(ladder.shells):
+        return _factor_blocks(ladder, kt, tables, sink, root, work)
+    n_inner = ladder.interior.shape.n_unknowns
+    inner_root, shell_root = root[:n_inner], root[n_inner:]
+    to_blocks, among = shell_means(ladder, *tables, kt)
+    leak = sink[:n_inner] + (shell_root @ to_blocks) / inner_root
+    blocks, diagonal = _factor_blocks(ladder, kt, tables, leak, inner_root, work)
+    outflow = (to_blocks @ inner_root + among @ shell_root) / shell_root + sink[n_inner:]
+    diagonal = np.concatenate([diagonal, outflow])
+    scale = np.sqrt(diagonal)
+    to_blocks /= np.outer(scale[n_inner:], scale[:n_inner])
+    among /= np.outer(scale[n_inner:], scale[n_inner:])
+    whole = border_symmetric(blocks, to_blocks, among, root * scale, sink * root / scale)
+    return whole, diagonal
+
+
+def _factor_blocks(
+    ladder: Ladder,
+    kt_ev: float,
+    tables: tuple[FloatArray, FloatArray],
+    sink: FloatArray,
+    root: FloatArray,
+    work: Workspace,
+) -> tuple[BlockCholesky, FloatArray]:
+    """Factor the blocks of levels resolved in l; what they lose to whole shells is in `sink`."""
+    inside = ladder.interior
+    blocks = slice(inside.shape.n_unknowns)
+    upward, downward, diagonal = np.empty((3, inside.shape.n_unknowns))
     symmetric_blocks(
-        ladder.n_max,
+        ladder.resolve_l_to,
         inside.first_n,
         ladder.dipole.strength_per_s,
         ladder.dipole.offset,
-        geometric,
-        stretch,
+        *tables,
         inside.shape.start,
         inside.shape.coupling_start,
         root,
-        ladder.energy_excess_ev[inside.position] / kt,
-        np.where(inside.idle, 0.0, 1.0),
+        ladder.energy_excess_ev[inside.position[blocks]] / kt_ev,
+        np.where(inside.idle[blocks], 0.0, 1.0),
         sink,
         upward,
         downward,
@@ -277,30 +263,24 @@ def _factor_warm(
     return solver, diagonal
 
 
-def _half_angle_tables(ladder: Ladder, kt_ev: float) -> tuple[FloatArray, FloatArray]:
-    """1/(2 sinh(x/2)) and 1/(e^x - 1) over (n, n'), shape (n_max + 1, n_max + 1)."""
-    term = np.zeros(ladder.n_max + 1)
-    term[1:] = ionization_scale_ev(ladder.charge) / kt_ev / np.arange(1.0, ladder.n_max + 1) ** 2
-    half = 0.5 * np.abs(term[:, None] - term[None, :])
-    half[0], half[:, 0] = 1.0, 1.0
-    np.fill_diagonal(half, 1.0)  # no line there: its strength is 0
-    # 1/(2 sinh y) = e^-y / (1 - e^-2y): no overflow for the coldest fields.
-    whole = -np.expm1(-2.0 * half)
-    return np.exp(-half) / whole, np.exp(-2.0 * half) / whole
-
-
-def _factor_cold(ladder: Ladder, temperature_k: float, sink: FloatArray) -> BlockLU:
+def _factor_cold(ladder: Ladder, temperature_k: float, sink: FloatArray) -> BlockLU | BorderedLU:
     upward, downward = rate_blocks(ladder, temperature_k)
-    return factor_general(ladder.interior.shape, upward, downward, sink)
+    if not len(ladder.shells):
+        return factor_general(ladder.interior.shape, upward, downward, sink)
+    border = shell_rates(ladder, temperature_k)
+    leak = sink[: ladder.interior.shape.n_unknowns] + border.into.sum(axis=0)
+    inner = factor_general(ladder.interior.shape, upward, downward, leak)
+    return border_general(inner, border, sink)
 
 
 def rate_blocks(ladder: Ladder, temperature_k: float) -> tuple[list[FloatArray], list[FloatArray]]:
     """Rates between the interior blocks l and l + 1, both directions."""
     inside = ladder.interior
     above, below = [], []
-    for l in range(ladder.n_max - 1):
-        rows = np.arange(inside.first_n[l], ladder.n_max + 1)
-        columns = np.arange(inside.first_n[l + 1], ladder.n_max + 1)
+    top = ladder.resolve_l_to
+    for l in range(top - 1):
+        rows = np.arange(inside.first_n[l], top + 1)
+        columns = np.arange(inside.first_n[l + 1], top + 1)
         strength = ladder.dipole.block(l)[np.ix_(rows - l - 1, columns - l - 2)].copy()
         strength[inside.shape.part(inside.idle, l)] = 0.0
         strength[:, inside.shape.part(inside.idle, l + 1)] = 0.0
@@ -336,21 +316,10 @@ def rate_matrix(ladder: Ladder, radiation_temperature_k: float) -> sparse.csr_ar
         photoionization; nothing to the ground state), M[j, i] is minus the rate from i to j.
     """
     rows, columns, values = [], [], []
-    for l in range(ladder.n_max - 1):
-        n, other = np.meshgrid(
-            np.arange(max(l + 1, 2), ladder.n_max + 1),
-            np.arange(l + 2, ladder.n_max + 1),
-            indexing="ij",
-        )
-        strength = ladder.dipole.block(l)[n - l - 1, other - l - 2]
-        real = strength > 0.0
-        own = (n * (n - 1) // 2 + l)[real]
-        partner = (other * (other - 1) // 2 + l + 1)[real]
-        rises = (other > n)[real]
+    for own, partner, strength in line_groups(ladder):
+        rises = ladder.levels.n[partner] > ladder.levels.n[own]
         lower, upper = np.where(rises, own, partner), np.where(rises, partner, own)
-        log_up, log_down = log_line_rates(
-            ladder, lower, upper, strength[real], radiation_temperature_k
-        )
+        log_up, log_down = log_line_rates(ladder, lower, upper, strength, radiation_temperature_k)
         rows += [upper - 1, lower - 1]
         columns += [lower - 1, upper - 1]
         values += [np.exp(log_up), np.exp(log_down)]

@@ -62,7 +62,7 @@ def populations(
         log_source[lines.position] = np.logaddexp(log_source[lines.position], log_x + lines.log_out)
     log_population = np.full(len(ladder.levels), -np.inf)
     error = 0.0
-    if inside.shape.n_unknowns:
+    if inside.n_unknowns:
         source = log_source[inside.position]
         source[inside.idle] = -np.inf
         solution = factored.log_populations(source)

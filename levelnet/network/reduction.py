@@ -96,10 +96,10 @@ def _least_climbs_ev(ladder: Ladder) -> FloatArray:
     top = min(ladder.n_max, int(ladder.kept.n.max()) + 2)
     n, l = ladder.levels.n, ladder.levels.l
     reach = np.flatnonzero((n > 1) & (n <= top))
-    one, other = np.nonzero(
-        (np.abs(np.subtract.outer(l[reach], l[reach])) == 1)
-        & (n[reach][:, None] != n[reach][None, :])
-    )
+    shell = ladder.levels.shell[reach]
+    allowed = np.abs(np.subtract.outer(l[reach], l[reach])) == 1
+    allowed |= np.logical_or.outer(shell, shell)
+    one, other = np.nonzero(allowed & (n[reach][:, None] != n[reach][None, :]))
     start, end = reach[one], reach[other]
     energy, size, kept = ladder.levels.energy_ev, len(n), ladder.kept_position
     cost = np.maximum(0.0, energy[end] - energy[start])
@@ -126,7 +126,7 @@ def all_fates(factored: FactoredInterior) -> FloatArray:
     """Chance of each level to reach each kept level first, shape (n_kept, n_levels); own is 1."""
     ladder = factored.ladder
     fates = np.zeros((len(ladder.kept), len(ladder.levels)))
-    if ladder.interior.shape.n_unknowns:
+    if ladder.interior.n_unknowns:
         fates[:, ladder.interior.position] = factored.fates(factored.to_kept)
     fates[:, ladder.kept_position] = np.eye(len(ladder.kept))
     return fates
@@ -163,8 +163,7 @@ def _log_spectrum(ladder: Ladder, temperature_k: float, fates: FloatArray) -> Fl
     weights = recombination_weights(ladder.bound_free, temperature_k)
     weighted = fates * (0.5 * ladder.levels.statistical_weight)
     spectrum = np.zeros((len(ladder.kept), weights.shape[1]))
-    for n in range(2, ladder.n_max + 1):
-        first = n * (n - 1) // 2
-        shell = weighted[:, first : first + n] @ ladder.bound_free.cross_section_cm2[n - 1]
+    for n, place in ladder.by_n():
+        shell = weighted[:, place] @ ladder.bound_free.cross_section_cm2[n - 1]
         spectrum += shell * weights[n - 1]
     return np.log(np.maximum(spectrum, 1e-300))

@@ -60,14 +60,23 @@ class BlockCholesky:
         ndarray, shape (n_right, n_unknowns)
             The solutions. H is symmetric, so they solve the transposed system too.
         """
-        x = np.array(right, dtype=np.float64)
         shape = self.shape
-        if _is_small(shape):
-            small.solve_small(*_layout(shape), self.coupling, self.factor, x)
-            return x
+        if not _is_small(shape):
+            return self.solve_many(right)
+        x = np.array(right, dtype=np.float64)
+        small.solve_small(*_layout(shape), self.coupling, self.factor, x)
+        return x
+
+    def solve_many(self, right: FloatArray) -> FloatArray:
+        """Do the same by library calls for every block: for tens of right sides and more."""
+        x = np.array(right, dtype=np.float64)
         _substitute_down(self, x)
         _substitute_up(self, x)
         return x
+
+    def triangle(self, block: int) -> tuple[FloatArray, bool]:
+        """View of one triangle, Fortran-ordered as LAPACK wants it; True where it is L, not L^T."""
+        return self.shape.factor(self.factor, block), not _is_small(self.shape)
 
 
 def factor_symmetric(
@@ -185,7 +194,7 @@ def _substitute_down(factored: BlockCholesky, x: FloatArray) -> None:
             continue
         if block + 1 < len(parts) and parts[block + 1].size:
             own += parts[block + 1] @ shape.coupling(factored.coupling, block).T
-        _triangle(shape.factor(factored.factor, block), own, transposed=0)
+        _triangle(*factored.triangle(block), own, transposed=0)
 
 
 def _substitute_up(factored: BlockCholesky, x: FloatArray) -> None:
@@ -199,12 +208,13 @@ def _substitute_up(factored: BlockCholesky, x: FloatArray) -> None:
             continue
         if block and parts[block - 1].size:
             own[...] += parts[block - 1] @ shape.coupling(factored.coupling, block - 1)
-        _triangle(shape.factor(factored.factor, block), own, transposed=1)
+        _triangle(*factored.triangle(block), own, transposed=1)
 
 
-def _triangle(lower: FloatArray, right: FloatArray, transposed: int) -> None:
-    """Solve with one triangle in place; `right` has shape (n_right, size)."""
+def _triangle(factor: FloatArray, lower: bool, right: FloatArray, transposed: int) -> None:
+    """Solve with L or L^T in place; `right` has shape (n_right, size)."""
+    turned = transposed if lower else 1 - transposed
     if len(right) == 1:  # one right side: the vector routine has a third of the overhead
-        right[0] = blas.dtrsv(lower, right[0], lower=1, trans=transposed)
+        right[0] = blas.dtrsv(factor, right[0], lower=lower, trans=turned)
     else:
-        right[...] = blas.dtrsm(1.0, lower, right.T, lower=1, trans_a=transposed).T
+        right[...] = blas.dtrsm(1.0, factor, right.T, lower=lower, trans_a=turned).T

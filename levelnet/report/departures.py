@@ -40,7 +40,8 @@ def departure_map_figure(
     Returns
     -------
     matplotlib Figure
-        ln b (dimensionless) in colour, logarithmic in its size. One sign: cividis, yellow is far
+        ln b (dimensionless) in colour, logarithmic in its size; a whole shell has one colour for
+        all its l. One sign: cividis, yellow is far
         from equilibrium; both signs: a diverging map about 0.
 
     Raises
@@ -144,8 +145,9 @@ def _draw_curves(axes: Axes, levels: LevelSet, log_departure: FloatArray) -> Non
     marker = "o" if n_max <= 12 else None
     n, mean = mean_over_l(levels, log_departure)
     axes.plot(n[n > 1], mean[n > 1], color=style.AMBER, lw=3.0, alpha=0.8, label="mean over $l$")
-    for l in range(min(3, n_max)):
-        chosen = (levels.l == l) & (levels.n > 1)
+    for l in range(min(3, int(levels.l.max()) + 1)):
+        # In a whole shell every l has the same b.
+        chosen = ((levels.l == l) | levels.shell) & (levels.n > 1)
         axes.plot(
             levels.n[chosen],
             log_departure[chosen],
@@ -185,11 +187,13 @@ def mean_over_l(levels: LevelSet, log_departure: FloatArray) -> tuple[FloatArray
 
 
 def _level_grid(levels: LevelSet, values: FloatArray) -> FloatArray:
-    """Values on (l, n - 2) for n >= 2; NaN where no level is."""
+    """Values on (l, n - 2) for n >= 2; NaN where no level is. A whole shell fills all its l."""
     n_max = int(levels.n[-1])
     grid = np.full((n_max, n_max - 1), np.nan)
-    excited = levels.n > 1
+    excited = (levels.n > 1) & ~levels.shell
     grid[levels.l[excited], levels.n[excited] - 2] = values[excited]
+    for n, value in zip(levels.n[levels.shell], values[levels.shell], strict=True):
+        grid[:n, n - 2] = value
     return grid
 
 

@@ -11,8 +11,8 @@ from scipy import constants as codata
 from levelnet.atomic.bound_bound import einstein_a
 from levelnet.kernels import assembly
 from levelnet.kernels.assembly import symmetric_blocks
-from levelnet.network.assembly import _half_angle_tables
 from levelnet.network.ladder import Ladder, hydrogen_ladder
+from levelnet.network.line_rates import half_angle_tables
 from tests.tolerances import ROUND_OFF
 
 KELVIN_PER_EV = codata.e / codata.k
@@ -38,7 +38,7 @@ def assembled(ladder: Ladder, kelvin: float, kernel: Any) -> dict[str, np.ndarra
         inside.first_n,
         ladder.dipole.strength_per_s,
         ladder.dipole.offset,
-        *_half_angle_tables(ladder, kt),
+        *half_angle_tables(ladder, kt),
         inside.shape.start,
         inside.shape.coupling_start,
         root,

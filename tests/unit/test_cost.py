@@ -27,6 +27,16 @@ def test_estimates_grow_with_the_atom() -> None:
     assert memory[3] > 8e9 / 3.0
 
 
+def test_whole_shells_cost_less_than_what_they_stand_for() -> None:
+    full = estimate(small_setup(300))
+    some = [estimate(small_setup(300, hydrogen={"resolve_l_to": n})) for n in (10, 50, 150)]
+    assert [c.seconds for c in some] == sorted(c.seconds for c in some)
+    assert all(c.seconds < full.seconds and c.memory_bytes < full.memory_bytes for c in some)
+    # The strengths of every line, n^3/3 numbers, are needed to average them.
+    assert all(c.memory_bytes > 8 * 300**3 / 3.0 for c in some)
+    assert estimate(small_setup(300, hydrogen={"resolve_l_to": 300})) == full
+
+
 def test_populations_are_counted() -> None:
     few, many = (estimate(small_setup(100, count=n)).memory_bytes for n in (2, 10002))
     # Population, departure: at least two arrays of 5050 levels.

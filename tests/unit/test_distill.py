@@ -23,7 +23,7 @@ from levelnet.pieces import FolderPieces, MemoryPieces, content_key
 from tests.small_runs import small_setup
 
 SETUP = small_setup(5)
-ATOM = Atom(5, "measured", ((2, 0), (2, 1)))
+ATOM = Atom(5, "measured", ((2, 0), (2, 1)), 5)
 
 
 @lru_cache
@@ -88,9 +88,10 @@ def test_another_atom_has_other_pieces() -> None:
             dataclasses.replace(ATOM, n_max=6),
             dataclasses.replace(ATOM, energies="nonrelativistic"),
             dataclasses.replace(ATOM, kept=((2, 0), (2, 1), (3, 1))),
+            dataclasses.replace(ATOM, resolve_l_to=4),
         )
     }
-    assert len(names) == 4
+    assert len(names) == 5
 
 
 BUILD = """
@@ -201,7 +202,11 @@ def test_an_error_in_a_worker_comes_through() -> None:
 
 @pytest.mark.parametrize("kept", [((2, 0), (2, 1)), ((2, 0), (2, 1), (3, 0), (3, 1), (3, 2))])
 def test_outline_has_the_constants_of_the_whole_atom(kept: tuple[tuple[int, int], ...]) -> None:
-    atom = Atom(20, "measured", kept)
+    _check_outline(Atom(20, "measured", kept, 20))
+    _check_outline(Atom(20, "measured", kept, 3))
+
+
+def _check_outline(atom: Atom) -> None:
     small, whole = nodes.outline(atom), nodes.prepared(atom)
     assert len(small[0].levels) < len(whole[0].levels)
     for name in ("lower", "upper", "barrier_k", "rise_k", "log_weight_ratio", "electron_k"):

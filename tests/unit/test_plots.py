@@ -140,6 +140,36 @@ def test_redshift_outside_the_outputs_is_refused(redshift: float) -> None:
         departure_map_figure(made_up_history(), redshift)
 
 
+def with_shells() -> History:
+    """Return a made-up history of 9 shells, those above n = 4 whole."""
+    levels = hydrogenic_levels(9, resolve_l_to=4)
+    history = made_up_history()
+    values = np.outer(np.ones(len(history.redshift)), -1.0 / (levels.n + 0.1 * levels.l))
+    return replace(history, species=(SpeciesPopulations("H I", levels, np.exp(values), values),))
+
+
+def test_map_draws_a_whole_shell_over_all_its_l() -> None:
+    history = with_shells()
+    levels, values = history.levels("H I"), history.log_departures("H I")[0]
+    grid: Any = departure_map_figure(history).axes[0].collections[0].get_array()
+    for n in range(2, 10):
+        for l in range(n):
+            at = levels.index(n, l if n <= 4 else -1)
+            assert grid[l, n - 2] == values[at]
+        assert np.all(grid.mask[n:, n - 2])
+
+
+def test_curves_go_on_through_whole_shells() -> None:
+    history = with_shells()
+    drawn = lines_of(departure_curves_figure(history, (900.0,)).axes[0])
+    levels, values = history.levels("H I"), history.log_departures("H I")[0]
+    for l, name in enumerate("spd"):
+        n, curve = drawn[f"$n${name}"]
+        assert n.tolist() == list(range(max(2, l + 1), 10))
+        assert curve[n > 4].tolist() == values[levels.shell].tolist()
+    assert drawn["mean over $l$"][1][-5:] == pytest.approx(values[levels.shell], rel=1e-14)
+
+
 @pytest.mark.parametrize("redshifts", [(), (100.0,) * 5])
 def test_number_of_panels_is_checked(redshifts: tuple[float, ...]) -> None:
     with pytest.raises(InputError, match="1 to 4"):

@@ -124,6 +124,20 @@ def test_digest_names_the_setup() -> None:
         ({"lines": {"lyman_lines": 0}}, ["lines.lyman_lines", '"all"']),
         ({"lines": {"lyman_lines": "some"}}, ["lines.lyman_lines", '"all"']),
         ({"lines": {"lyman_lines": 10}}, ["lyman_lines = 10", "only 9 Lyman lines"]),
+        ({"hydrogen": {"n_max": 10, "resolve_l_to": 1}}, ["hydrogen.resolve_l_to = 1", "2"]),
+        (
+            {"hydrogen": {"n_max": 10, "resolve_l_to": 11}},
+            ["hydrogen: resolve_l_to = 11: allowed are 2 to n_max = 10"],
+        ),
+        ({"hydrogen": {"n_max": 10, "resolve_l_to": 5.5}}, ["resolve_l_to = 5.5", "integer"]),
+        (
+            {"hydrogen": {"n_max": 10, "resolve_l_to": 5}, "lines": {"lyman_lines": 5}},
+            ["lines.lyman_lines = 5: only levels resolved in l", "a number from 1 to 4"],
+        ),
+        (
+            {"hydrogen": {"n_max": 10, "resolve_l_to": 5}, "lines": {"lyman_lines": "all"}},
+            ["lines.lyman_lines = 'all': only levels resolved in l", "a number from 1 to 4"],
+        ),
         ({"grid": {"redshift_start": 100.0, "redshift_end": 200.0}}, ["200", "below", "100"]),
         ({"grid": {"redshift_start": -1.0}}, ["grid.redshift_start = -1.0"]),
         ({"grid": {"redshift_start": 1e5}}, ["grid.redshift_start = 100000.0", "10000"]),
@@ -174,6 +188,15 @@ def test_all_complaints_come_at_once() -> None:
     ):
         assert part in text
     assert len(text.split("; ")) == 5
+
+
+def test_highest_n_resolved_in_l() -> None:
+    assert minimal(hydrogen={"n_max": 12}).hydrogen.highest_resolved == 12
+    shells = minimal(hydrogen={"n_max": 12, "resolve_l_to": 4}, lines={"lyman_lines": 3})
+    assert shells.hydrogen.highest_resolved == 4
+    assert parse_setup(shells.to_toml()) == shells
+    whole = minimal(hydrogen={"n_max": 12, "resolve_l_to": 12}, lines={"lyman_lines": "all"})
+    assert whole.hydrogen.highest_resolved == 12
 
 
 def test_load_setup(tmp_path: Path) -> None:
