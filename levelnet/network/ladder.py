@@ -12,6 +12,8 @@ from ..arrays import BoolArray, FloatArray, IntArray
 from ..atomic.bound_bound import DipoleBlocks, dipole_blocks
 from ..atomic.bound_free import BoundFree, bound_free
 from ..atomic.levels import LevelSet, hydrogenic_levels, ionization_scale_ev
+from ..atomic.overridden import with_overrides
+from ..atomic.overrides import Override
 from ..errors import InputError
 from ..numerics.block_system import BlockShape
 from .reduced import KeptLevels
@@ -94,7 +96,12 @@ def _atomic_data(n_max: int, charge: int) -> tuple[DipoleBlocks, BoundFree]:
     return dipole_blocks(n_max, charge), bound_free(n_max, charge)
 
 
-def hydrogen_ladder(n_max: int, energies: str, kept: tuple[tuple[int, int], ...]) -> Ladder:
+def hydrogen_ladder(
+    n_max: int,
+    energies: str,
+    kept: tuple[tuple[int, int], ...],
+    overrides: tuple[Override, ...] = (),
+) -> Ladder:
     """Build the ladder of hydrogen.
 
     Parameters
@@ -105,6 +112,8 @@ def hydrogen_ladder(n_max: int, energies: str, kept: tuple[tuple[int, int], ...]
         Level energies.
     kept : tuple of (n, l)
         Levels to keep: those that talk to the ground state, and any other asked for.
+    overrides : tuple of Override, optional
+        Factors on lines and cross sections.
 
     Returns
     -------
@@ -112,7 +121,7 @@ def hydrogen_ladder(n_max: int, energies: str, kept: tuple[tuple[int, int], ...]
         Levels, lines and continuum.
     """
     levels = hydrogenic_levels(n_max, energies)
-    lines, continuum = _atomic_data(n_max, 1)
+    lines, continuum = with_overrides(*_atomic_data(n_max, 1), overrides, n_max)
     n, l = (np.array(x) for x in zip(*sorted(kept), strict=True))
     if np.any((n < 2) | (n > n_max) | (l < 0) | (l >= n)):
         raise InputError(
