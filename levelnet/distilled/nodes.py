@@ -26,6 +26,7 @@ import numpy as np
 from threadpoolctl import threadpool_limits
 
 from ..arrays import FloatArray
+from ..atomic.overrides import Override
 from ..errors import SolveError
 from ..network.ladder import Ladder, hydrogen_ladder
 from ..network.rates import RateConstants, rate_constants, stack
@@ -50,23 +51,27 @@ class Atom:
         "measured" or "nonrelativistic".
     kept : tuple of (n, l)
         Kept levels.
+    overrides : tuple of Override
+        Factors on lines and cross sections.
     """
 
     n_max: int
     energies: str
     kept: KeptChoice
+    overrides: tuple[Override, ...] = ()
 
     @property
     def name(self) -> str:
         """Content name of the atom with the code that computes it."""
         code = code_digest(("constants", "kernels", "numerics", "atomic", "network"))
-        return content_key("distilled node", code, self.n_max, self.energies, self.kept)
+        factors = tuple(one.key for one in self.overrides)
+        return content_key("distilled node", code, self.n_max, self.energies, self.kept, factors)
 
 
 @functools.lru_cache(maxsize=1)
 def prepared(atom: Atom) -> tuple[Ladder, Pairs, RateConstants]:
     """The ladder of an atom, its pairs of kept levels and its constants; built once a process."""
-    ladder = hydrogen_ladder(atom.n_max, atom.energies, atom.kept)
+    ladder = hydrogen_ladder(atom.n_max, atom.energies, atom.kept, overrides=atom.overrides)
     pairs = exchange_pairs(ladder)
     return ladder, pairs, rate_constants(ladder, pairs)
 
@@ -79,7 +84,7 @@ def outline(atom: Atom) -> tuple[Ladder, Pairs, RateConstants]:
     hands out work need not hold the whole atom.
     """
     top = min(atom.n_max, max(n for n, _ in atom.kept) + 2)
-    ladder = hydrogen_ladder(top, atom.energies, atom.kept)
+    ladder = hydrogen_ladder(top, atom.energies, atom.kept, overrides=atom.overrides)
     pairs = exchange_pairs(ladder)
     return ladder, pairs, rate_constants(ladder, pairs)
 

@@ -39,11 +39,11 @@ def estimate(setup: Setup) -> Cost:
     """Estimate memory and time of a run from its sizes.
 
     Three cubes of n_max^3/3 numbers (line strengths, couplings, factors), the cross sections, and
-    the populations at every output redshift.
+    the populations at every output redshift; overrides of rates take a copy of the strengths.
     """
     n = setup.hydrogen.n_max
     n_out = len(setup.grid.redshifts or ()) or setup.grid.n_redshifts
-    cubes = 3 * 8.0 * n**3 / 3.0
+    cubes = (4 if setup.rates.network else 3) * 8.0 * n**3 / 3.0
     memory = cubes + 400.0 * n**2 + 5 * 8.0 * n_out * n**2 / 2.0 + _RESERVE_BYTES
     low = setup.cosmology.cmb_temperature_k * (1.0 + setup.grid.redshift_end)
     nodes = node_count(low, 6000.0, table_tolerance(setup)) + 7 if setup.accuracy.interpolate else 0
