@@ -62,7 +62,7 @@ class Override:
     def text(self) -> str:
         """What is done: "bound_bound 3d 2p x 1.01", "two_photon = 8.229 per s"."""
         if self.value_per_s is not None:
-            return f"{self.selector.text} = {self.value_per_s:g} per s"
+            return f"{self.selector.text} = {self.value_per_s:.10g} per s"
         return f"{self.selector.text} x {self.factor:.10g}"
 
 
@@ -123,14 +123,10 @@ class Rates:
         """Raise InputError where a row selects nothing in this atom."""
         for one in self.table:
             if not one.selector.exists_in(atom):
-                lines = (
-                    ""
-                    if one.selector.process != "escape"
-                    else (f" and {atom.lyman_lines} open Lyman lines")
-                )
                 raise InputError(
                     f'{one.where}: selector "{one.selector.text}" matches nothing in hydrogen with '
-                    f"n_max = {atom.n_max}{lines}"
+                    f"n_max = {atom.n_max}, resolve_l_to = {atom.resolve_l_to} and "
+                    f"lyman_lines = {atom.lyman_lines}"
                 )
 
     @property

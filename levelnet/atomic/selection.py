@@ -64,10 +64,12 @@ class LevelPattern:
 
     def common(self, other: LevelPattern) -> LevelPattern | None:
         """Levels in both patterns; None where there are none."""
-        low, high = max(self.low, other.low), min(self.high, other.high)
-        if low > high or (None not in {self.l, other.l} and self.l != other.l):
+        if None not in {self.l, other.l} and self.l != other.l:
             return None
-        return LevelPattern(low, high, other.l if self.l is None else self.l)
+        l = other.l if self.l is None else self.l
+        both = LevelPattern(max(self.low, other.low), min(self.high, other.high), l)
+        both = both.inside(ANY_ATOM)
+        return both if both.low <= both.high else None
 
 
 @dataclass(frozen=True, slots=True)
@@ -119,7 +121,7 @@ class Selector:
         if self.lower is None or other.lower is None or upper is None:
             return upper is not None
         lower = self.lower.common(other.lower)
-        return lower is not None and _has_pair(upper.inside(ANY_ATOM), lower.inside(ANY_ATOM))
+        return lower is not None and _has_pair(upper, lower)
 
 
 def _has_pair(upper: LevelPattern, lower: LevelPattern) -> bool:
