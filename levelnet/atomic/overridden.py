@@ -38,13 +38,14 @@ def with_overrides(
     for_levels = [one for one in overrides if one.selector.process == "bound_free"]
     if for_lines:
         strength = lines.strength_per_s.copy()
-        changed = replace(lines, strength_per_s=strength)
         for l in range(lines.n_max - 1):
-            rows, columns = lines.offset[l : l + 2]
-            block = strength[rows:columns].reshape(changed.block(l).shape)
-            block *= _line_factors(for_lines, l, lines.n_max, resolve_l_to)
+            here = [one for one in for_lines if _reaches(one.selector, l)]
+            if here:
+                first, end = lines.offset[l : l + 2]
+                block = strength[first:end].reshape(lines.block(l).shape)
+                block *= _line_factors(here, l, lines.n_max, resolve_l_to)
         strength.flags.writeable = False
-        lines = changed
+        lines = replace(lines, strength_per_s=strength)
     if for_levels:
         shells = tuple(
             _shell(sigma, n, for_levels, resolve_l_to)
@@ -71,6 +72,12 @@ def _pairs(
         return np.zeros(np.broadcast_shapes(*map(np.shape, (n, l, n_lower, l_lower))), np.bool_)
     chosen = selector.upper.matches(n, l) & selector.lower.matches(n_lower, l_lower)
     return np.asarray(chosen & (np.asarray(n) > n_lower))
+
+
+def _reaches(selector: Selector, l: int) -> bool:
+    """Whether a selector of lines may select some between l and l + 1."""
+    sides = selector.upper, selector.lower
+    return all(side is not None and side.l in {None, l, l + 1} for side in sides)
 
 
 def _line_factors(

@@ -64,6 +64,8 @@ class LevelPattern:
 
     def common(self, other: LevelPattern) -> LevelPattern | None:
         """Levels in both patterns; None where there are none."""
+        if self.high < other.low or other.high < self.low:
+            return None
         if None not in {self.l, other.l} and self.l != other.l:
             return None
         l = other.l if self.l is None else self.l

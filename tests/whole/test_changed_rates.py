@@ -9,10 +9,14 @@ import numpy as np
 import pytest
 
 import levelnet
+from levelnet.atomic.levels import hydrogenic_levels
 from levelnet.cli.main import main
+from levelnet.errors import Outcome
 from levelnet.escape.treatment import Sobolev
 from levelnet.history.run import solve
 from levelnet.history.setup import Setup
+from levelnet.studies.budget import error_budget, load_uncertainties
+from levelnet.studies.weighing import Weighing
 from levelnet.tables import read_table
 from tests.small_runs import small_setup
 
@@ -154,3 +158,53 @@ def test_responses_stated_with_the_default_uncertainties() -> None:
 
     ratio = electrons(rates={"rows": ("escape,2p,,1.01,,x",)}) / electrons()
     np.testing.assert_allclose((1.0 - ratio) / 0.01, list(stated.values()), atol=6e-4)
+
+
+def test_a_correlated_group_is_a_run_with_all_its_rates_changed(tmp_path: Path) -> None:
+    """Derivatives by differences of runs, through the budget, against one run at +1 sigma."""
+    redshifts = (400.0, 900.0, 1200.0)
+    grid = {"redshifts": redshifts, "redshift_end": 400.0}
+    names = ("two_photon,2s,", "escape,2p,", "bound_free,2-3,", "bound_bound,4d,2p")
+    sigma = (2e-3, -3e-3, 1e-3, 5e-2)  # the second falls while the others rise
+
+    def electrons(*rows: str) -> np.ndarray:
+        parts = {"rates": {"rows": rows}} if rows else {}
+        setup = small_setup(5, grid=grid, accuracy={"relative": 1e-9}, **parts)
+        return np.log(solve(setup).free_electron_fraction)
+
+    step = 1e-3
+    by = [
+        (electrons(f"{one},{1 + step},,x") - electrons(f"{one},{1 / (1 + step)},,x"))
+        / (2.0 * np.log1p(step))
+        for one in names
+    ]
+    levels = hydrogenic_levels(5)
+    level = np.zeros((3, len(levels)))
+    level[:, levels.index(2, 1)] = by[2]  # the sum over 2-3 is all that counts
+    weighed = Weighing(
+        small_setup(5),
+        Outcome.CONVERGED,
+        tuple(f"x_e({z:g})" for z in redshifts[::-1]),
+        ("1",) * 3,
+        np.exp(electrons()),
+        levels,
+        np.array([levels.index(4, 2)]),
+        np.array([levels.index(2, 1)]),
+        ("2p-1s",),
+        (),
+        by[3][:, None],
+        level,
+        -by[1][:, None],  # sigmas are not negative: the sign goes here
+        by[0],
+        np.zeros(3),
+        np.zeros((3, 0)),
+    )
+    file = tmp_path / "group.csv"
+    rows = [f"{one},{abs(s)},all,x" for one, s in zip(names, sigma, strict=True)]
+    file.write_text("\n".join(["process,upper,lower,sigma,group,source", *rows]))
+    budget = error_budget(weighed, load_uncertainties(file))
+    changed = [f"{one},{float(np.exp(s))!r},,x" for one, s in zip(names, sigma, strict=True)]
+    difference = electrons(*changed) - electrons()
+    # Second order: sigma^2 of some 1e-5 times curvatures of order 1.
+    np.testing.assert_allclose(budget.contribution[:, 0], difference, atol=1e-5, rtol=1e-2)
+    np.testing.assert_allclose(budget.sigma, np.abs(budget.contribution[:, 0]), rtol=1e-14)
