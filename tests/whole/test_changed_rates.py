@@ -169,10 +169,10 @@ def test_a_correlated_group_is_a_run_with_all_its_rates_changed(tmp_path: Path) 
 
     def electrons(*rows: str) -> np.ndarray:
         parts = {"rates": {"rows": rows}} if rows else {}
-        setup = small_setup(5, grid=grid, accuracy={"relative": 1e-9}, **parts)
+        setup = small_setup(5, grid=grid, **parts)
         return np.log(solve(setup).free_electron_fraction)
 
-    step = 1e-3
+    step = 1e-2
     by = [
         (electrons(f"{one},{1 + step},,x") - electrons(f"{one},{1 / (1 + step)},,x"))
         / (2.0 * np.log1p(step))
