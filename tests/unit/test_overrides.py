@@ -56,17 +56,17 @@ def test_a_file_becomes_rows(tmp_path: Path) -> None:
     file = tmp_path / "my.csv"
     file.write_text(
         f"\ufeff# INVENTED rates of the Tarnholt Array\n\n{HEADER}\n"
-        ' bound_bound,3d,2p,1.01,,"Müller, run 4"\r\n# more\ntwo_photon,2s,,,8.229,x\n',
+        ' bound_bound,3d,2p,1.01,,"M\u00fcller, run 4"\r\n# more\ntwo_photon,2s,,,8.229,x\n',
         encoding="utf-8",
     )
     rates = Rates(overrides=str(file))
     assert rates.overrides is None
     assert rates.rows == (
-        'bound_bound,3d,2p,1.01,,"Müller, run 4"',
+        'bound_bound,3d,2p,1.01,,"M\u00fcller, run 4"',
         "two_photon,2s,,,8.229,x",
     )
     first, second = rates.table
-    assert (first.factor, first.value_per_s, first.source) == (1.01, None, "Müller, run 4")
+    assert (first.factor, first.value_per_s, first.source) == (1.01, None, "M\u00fcller, run 4")
     assert second.value_per_s == 8.229
     assert first.where == f"{file}, row 1"
     assert [one.text for one in rates.table] == [
@@ -77,13 +77,13 @@ def test_a_file_becomes_rows(tmp_path: Path) -> None:
 
 def test_a_setup_carries_the_rows_through_toml(tmp_path: Path) -> None:
     file = tmp_path / "my.csv"
-    file.write_text(f'{HEADER}\nescape,2p,,1.05,,"Müller, ""x"""\n', encoding="utf-8")
+    file.write_text(f'{HEADER}\nescape,2p,,1.05,,"M\u00fcller, ""x"""\n', encoding="utf-8")
     setup = small_setup(rates={"overrides": str(file)})
     file.unlink()
     again = parse_setup(setup.to_toml())
     assert again == setup
     assert again.digest == setup.digest != small_setup().digest
-    assert again.rates.table[0].source == 'Müller, "x"'
+    assert again.rates.table[0].source == 'M\u00fcller, "x"'
     assert dataclasses.replace(setup, title="x").rates == setup.rates
 
 

@@ -39,7 +39,7 @@ ROWS = """\
 # INVENTED
 process,upper,lower,factor,value_per_s,source
 bound_bound,3d,2p,,6.5e7,"INVENTED: laboratory of the Tarnholt Array"
-two_photon,2s,,1.01,,"INVENTED: Müller"
+two_photon,2s,,1.01,,"INVENTED: M\u00fcller"
 """
 
 
@@ -54,7 +54,7 @@ def folder(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Path:
 def test_old_and_new_side_by_side(folder: Path, capsys: pytest.CaptureFixture[str]) -> None:
     assert main(["solve", "run.toml", "--compare-rates", "--no-cache", "--quiet"]) == 0
     said = capsys.readouterr().out
-    assert "two_photon 2s x 1.01: INVENTED: Müller" in said
+    assert "two_photon 2s x 1.01: INVENTED: M\u00fcller" in said
     assert "old" in said
     assert "relative change" in said
     assert "z_* (tau = 1)" in said
@@ -85,7 +85,7 @@ def test_a_result_carries_its_overrides(folder: Path) -> None:
     assert main(["solve", "run.toml", "--no-cache", "--quiet"]) == 0
     (folder / "my.csv").unlink()
     again = levelnet.read("run.h5")
-    assert again.setup.rates.table[1].source == "INVENTED: Müller"
+    assert again.setup.rates.table[1].source == "INVENTED: M\u00fcller"
     assert any("INVENTED: laboratory of the Tarnholt Array" in note for note in again.notes)
     assert "= 65000000 per s" in "".join(again.notes)
 
