@@ -10,6 +10,9 @@ from .. import constants as const
 from ..arrays import BoolArray, FloatArray, IntArray, frozen_array
 from ..errors import InputError
 
+ORBITAL_LETTERS = "spdfghiklmnoqrtuvwxyz"
+"""Letters of l = 0, 1, ...: after s, p, d they run from f, without j and without s and p."""
+
 
 def level_name(n: int, l: int) -> str:
     """Spectroscopic name of a level: "2s", "3d", or "n=60" for a whole shell (l = -1).
@@ -18,8 +21,7 @@ def level_name(n: int, l: int) -> str:
     """
     if l < 0:
         return f"n={n}"
-    letters = "spdfghiklmnoqrtuvwxyz"
-    return f"{n}{letters[l]}" if l < len(letters) else f"{n}[l={l}]"
+    return f"{n}{ORBITAL_LETTERS[l]}" if l < len(ORBITAL_LETTERS) else f"{n}[l={l}]"
 
 
 # Mass numbers of the most abundant isotopes from lithium to zinc (common practice).

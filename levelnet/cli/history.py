@@ -114,6 +114,7 @@ def chosen_setup(table: EffectiveTable, options: argparse.Namespace) -> Setup:
     """The setup of a history: that of the file given, or the table's with the parameters given."""
     from ..history.setup import load_setup
 
+    setup: Setup
     if options.setup is not None:
         setup = load_setup(options.setup)
         for name in ("n_max", "energies", "highest_resolved"):
@@ -124,6 +125,7 @@ def chosen_setup(table: EffectiveTable, options: argparse.Namespace) -> Setup:
                     f"{options.setup}: hydrogen.{shown} = {asked}, but the table {options.table} "
                     f"was distilled with {there}"
                 )
+        _check_overrides(setup, table, options)
         return setup
     cosmology: dict[str, Any] = _given(options, _PARAMETERS)
     if "helium_mass_fraction" in cosmology:
@@ -136,6 +138,19 @@ def chosen_setup(table: EffectiveTable, options: argparse.Namespace) -> Setup:
         physics=dataclasses.replace(setup.physics, **changes),
     )
     return replaced
+
+
+def _check_overrides(setup: Setup, table: EffectiveTable, options: argparse.Namespace) -> None:
+    """Refuse overrides of rates other than those distilled; the two-photon rate is free."""
+    from ..distilled.kept import check_overrides
+
+    asked, there = ({one.key for one in of.rates.network} for of in (setup, table.setup))
+    if asked != there:
+        raise InputError(
+            f"{options.setup}: rates: the table {options.table} was distilled with other overrides "
+            "of lines or cross sections; distil this setup"
+        )
+    check_overrides(setup)
 
 
 def _given(options: argparse.Namespace, names: dict[str, str]) -> dict[str, float]:
@@ -157,7 +172,7 @@ def _history(table: EffectiveTable, setup: Setup, options: argparse.Namespace) -
             setup.cosmology,
             redshifts=redshifts,
             lines=setup.lines,
-            two_photon_rate_per_s=setup.hydrogen.two_photon_rate_per_s,
+            two_photon_rate_per_s=setup.two_photon_rate_per_s,
             relative=setup.accuracy.relative,
             observables=True,
             fine_structure_change=setup.physics.fine_structure_change,

@@ -11,6 +11,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 from ..errors import AccuracyWarning, Outcome
+from .compare_rates import comparison_text, comparison_values, without_overrides
 from .console import Console
 from .output import history_values, print_json, size_text, summary_text, time_text
 from .paths import check_target
@@ -52,6 +53,11 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
         action="store_true",
         help="reduce the network at every evaluation instead of interpolating (slow, for checking)",
     )
+    parser.add_argument(
+        "--compare-rates",
+        action="store_true",
+        help="solve without the overridden rates of the setup too, and print old and new",
+    )
 
 
 def run(options: argparse.Namespace, console: Console) -> int:
@@ -62,20 +68,26 @@ def run(options: argparse.Namespace, console: Console) -> int:
     if options.direct:
         accuracy = dataclasses.replace(setup.accuracy, interpolate=False)
         setup = dataclasses.replace(setup, accuracy=accuracy)
+    plain = without_overrides(setup) if options.compare_rates else None
     target = options.output or Path(f"{options.setup.stem}.h5")
     if options.dry_run:
         return _dry_run(setup, options.json)
     check_target(target, options.force, options.setup)
     history, seconds = compute(setup, console, cache=not options.no_cache)
+    old = None if plain is None else compute(plain, console, cache=not options.no_cache)[0]
 
     from ..store import write
 
     write(history, target, force=options.force)
     if options.json:
-        print_json({**history_values(history), "file": target, "seconds": seconds})
+        values = {**history_values(history), "file": target, "seconds": seconds}
+        compared = {} if old is None else {"compare_rates": comparison_values(old, history)}
+        print_json(values | compared)
     else:
         print(summary_text(history))
         print(f"{'file':<22}{target} (solved in {time_text(seconds)})")
+        if old is not None:
+            print(f"\n{comparison_text(old, history)}")
     return finish(history, console)
 
 

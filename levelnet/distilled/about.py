@@ -51,6 +51,7 @@ def about_lines(table: EffectiveTable) -> list[str]:
         f"{setup.physics.fine_structure_change:g}, electron mass "
         f"{setup.physics.electron_mass_change:g}; what follows starts from the measured constants, "
         "so pass these changes to have those of the setup",
+        *(f"overridden:  {json.dumps(f'{one.text} ({one.source})')}" for one in setup.rates.table),
         f"tolerance:   {table.tolerance:g} in the natural logarithm of each quantity",
         *certificate_lines(table.certificate),
         "method:      interior levels eliminated in the quasi-steady state (Ali-Haimoud & Hirata "

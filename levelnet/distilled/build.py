@@ -21,7 +21,7 @@ from ..network.tabulation import TabulatedReduction, node_count
 from ..numerics.chebyshev import ChebyshevSeries, chebyshev_nodes
 from ..pieces import Pieces
 from .certificate import certify as certify_table
-from .kept import choose_kept
+from .kept import check_overrides, choose_kept
 from .nodes import Atom, NodeSource, outline
 from .patches import Patches, Ranges, fit_patches
 from .table import EffectiveTable
@@ -87,7 +87,8 @@ def distill(  # noqa: PLR0913  choices by name, each with a default
     Raises
     ------
     InputError
-        For arguments out of range, or an atom that does not fit in memory.
+        For arguments out of range, an atom that does not fit in memory, or overrides of rates that
+        are not in a table.
     SolveError
         If the tolerance is out of reach, or a worker process dies again and again on one input.
     """
@@ -97,7 +98,8 @@ def distill(  # noqa: PLR0913  choices by name, each with a default
         raise InputError(f"tolerance = {tolerance:g}: allowed are {TIGHTEST:g} to {LOOSEST:g}")
     _check_memory(setup, executor)
     tell = progress or (lambda stage, fraction: None)
-    atom = Atom.of(setup.hydrogen, choice)
+    check_overrides(setup)
+    atom = Atom.of(setup.hydrogen, choice, setup.rates.network)
     tell("atomic data", 0.0)
     with threadpool_limits(limits=1, user_api="blas"):
         constants = outline(atom)[2]

@@ -81,7 +81,8 @@ def effective_rates(
     Parameters
     ----------
     setup : Setup
-        The atom (``hydrogen``), its open lines (``lines``) and changed constants (``physics``).
+        The atom (``hydrogen``), its open lines (``lines``), changed constants (``physics``) and
+        overrides of lines and cross sections (``rates``).
     radiation_temperature_k, matter_temperature_k : array_like, K
         0.02 to 1e5 K over the factor by which changed constants scale energies; broadcast. One
         factorization for each different T_r.
@@ -105,7 +106,7 @@ def effective_rates(
     Ali-Haimoud & Hirata 2010, Phys. Rev. D 82, 063521; Burgin 2009, Bull. Lebedev Phys. Inst. 36,
     110.
     """
-    atom = Atom.of(setup.hydrogen, choose_kept(setup, kept))
+    atom = Atom.of(setup.hydrogen, choose_kept(setup, kept), setup.rates.network)
     check_memory(setup)
     factor = scales(setup.physics)
     radiation, matter = np.broadcast_arrays(

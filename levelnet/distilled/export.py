@@ -148,7 +148,7 @@ def _shared(table: EffectiveTable, name: str, show: Callable[[float], str]) -> d
         "y_high": show(table.ratio_high),
         "hottest": show(COLLISIONS_K),
         "never": show(NEVER + 1.0),
-        "two_photon_rate": show(table.setup.hydrogen.two_photon_rate_per_s),
+        "two_photon_rate": show(table.setup.two_photon_rate_per_s),
         # Its helium and electron part is 1/2 at these arguments.
         "compton": show(2.0 * float(compton_rate_per_s(1.0, 1.0, 0.0))),
         "mass_ratio": show(const.ELECTRON_PROTON_MASS_RATIO),

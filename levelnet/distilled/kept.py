@@ -1,4 +1,4 @@
-"""Which levels a distilled network keeps."""
+"""Which levels a distilled network keeps, and which setups it cannot stand for."""
 
 from __future__ import annotations
 
@@ -63,3 +63,13 @@ def choose_kept(setup: Setup, kept: Iterable[tuple[int, int]] | None) -> KeptCho
 
 def _l_fits(level: tuple[int, int]) -> bool:
     return 0 <= level[1] < level[0]
+
+
+def check_overrides(setup: Setup) -> None:
+    """Refuse overrides that a table could not carry to the histories made from it."""
+    for one in setup.rates.table:
+        if one.selector.process in {"escape", "compton"}:
+            raise InputError(
+                f'{one.where}: selector "{one.selector.text}": a table of effective rates holds no '
+                f"{one.selector.process} rates; such an override needs levelnet solve"
+            )

@@ -26,6 +26,7 @@ import numpy as np
 from threadpoolctl import threadpool_limits
 
 from ..arrays import FloatArray
+from ..atomic.overrides import Override
 from ..atomic.species import Hydrogen
 from ..errors import SolveError
 from ..network.ladder import Ladder, hydrogen_ladder
@@ -53,30 +54,34 @@ class Atom:
         Kept levels.
     resolve_l_to : int
         Highest n with levels resolved in l.
+    overrides : tuple of Override
+        Factors on lines and cross sections.
     """
 
     n_max: int
     energies: str
     kept: KeptChoice
     resolve_l_to: int
+    overrides: tuple[Override, ...] = ()
 
     @staticmethod
-    def of(hydrogen: Hydrogen, kept: KeptChoice) -> Atom:
-        """Hydrogen of a setup with these kept levels."""
-        return Atom(hydrogen.n_max, hydrogen.energies, kept, hydrogen.highest_resolved)
+    def of(hydrogen: Hydrogen, kept: KeptChoice, overrides: tuple[Override, ...] = ()) -> Atom:
+        """Hydrogen of a setup with these kept levels and overridden rates."""
+        return Atom(hydrogen.n_max, hydrogen.energies, kept, hydrogen.highest_resolved, overrides)
 
     def ladder(self, n_max: int | None = None) -> Ladder:
         """Build the ladder, or its part up to `n_max`."""
         top = n_max or self.n_max
-        return hydrogen_ladder(top, self.energies, self.kept, min(self.resolve_l_to, top))
+        resolved = min(self.resolve_l_to, top)
+        return hydrogen_ladder(top, self.energies, self.kept, resolved, self.overrides)
 
     @property
     def name(self) -> str:
         """Content name of the atom with the code that computes it."""
         code = code_digest(("constants", "kernels", "numerics", "atomic", "network"))
-        return content_key(
-            "distilled node", code, self.n_max, self.energies, self.kept, self.resolve_l_to
-        )
+        factors = tuple(one.key for one in self.overrides)
+        what = self.n_max, self.energies, self.kept, self.resolve_l_to, factors
+        return content_key("distilled node", code, *what)
 
 
 @functools.lru_cache(maxsize=1)

@@ -97,7 +97,7 @@ def make_atom(
         If lines are asked for whose upper level the table does not keep, or the rate is negative.
     """
     if two_photon_rate_per_s is None:
-        two_photon_rate_per_s = table.setup.hydrogen.two_photon_rate_per_s
+        two_photon_rate_per_s = table.setup.two_photon_rate_per_s
     if not 0.0 <= two_photon_rate_per_s <= 1e6:
         raise InputError(
             f"two_photon_rate_per_s = {two_photon_rate_per_s:g}: allowed are 0 to 1e6 s^-1"

@@ -6,6 +6,8 @@ import numpy as np
 
 from ..atomic.bound_bound import einstein_a
 from ..atomic.levels import level_name
+from ..atomic.overridden import transition_factors
+from ..atomic.overrides import Override
 from ..atomic.physics import UNCHANGED, Scales
 from ..escape.treatment import ResonanceLines
 from ..network.ladder import Ladder, hydrogen_ladder
@@ -39,7 +41,7 @@ def build_ladder(
     kept = {(2, 0), *((n, 1) for n in range(2, count + 2))}
     kept |= {level for level in keeps if level[0] <= top}
     resolved = min(setup.hydrogen.highest_resolved, top)
-    return hydrogen_ladder(top, setup.hydrogen.energies, tuple(kept), resolved)
+    return hydrogen_ladder(top, setup.hydrogen.energies, tuple(kept), resolved, setup.rates.network)
 
 
 def lyman_lines(ladder: Ladder, count: int | None = None) -> ResonanceLines:
@@ -48,7 +50,10 @@ def lyman_lines(ladder: Ladder, count: int | None = None) -> ResonanceLines:
 
 
 def resonance_lines(
-    kept: KeptLevels, count: int | None = None, scales: Scales = UNCHANGED
+    kept: KeptLevels,
+    count: int | None = None,
+    scales: Scales = UNCHANGED,
+    overrides: tuple[Override, ...] = (),
 ) -> ResonanceLines:
     """Lyman lines from kept np levels.
 
@@ -60,15 +65,13 @@ def resonance_lines(
         How many lines, from Lyman-alpha up; None: one from every kept np level.
     scales : Scales, optional
         What changed constants do to the rates.
+    overrides : tuple of Override, optional
+        Factors on lines among excited levels, which broaden the upper level.
     """
     highest = np.inf if count is None else count + 1
     upper = np.flatnonzero((kept.l == 1) & (kept.n <= highest))
     n = kept.n[upper]
-    decay = [
-        float(np.sum(einstein_a(k, 1, np.arange(1, k), 0)))
-        + float(np.sum(einstein_a(k, 1, np.arange(3, k), 2)))
-        for k in n.tolist()
-    ]
+    decay = [_decay_rate_per_s(k, overrides) for k in n.tolist()]
     return ResonanceLines(
         tuple(f"{level_name(k, 1)}-1s" for k in n.tolist()),
         upper,
@@ -77,3 +80,13 @@ def resonance_lines(
         kept.statistical_weight[upper] / 2.0,
         np.array(decay) * scales.line_rate,
     )
+
+
+def _decay_rate_per_s(n: int, overrides: tuple[Override, ...]) -> float:
+    """Spontaneous decay rate of level np in all its lines."""
+    to_s, to_d = np.arange(1, n), np.arange(3, n)
+    total = 0.0
+    for lower, l in ((to_s, 0), (to_d, 2)):
+        factor = transition_factors(overrides, *np.broadcast_arrays(n, 1, lower, l))
+        total += float(np.sum(einstein_a(n, 1, lower, l) * factor))
+    return total

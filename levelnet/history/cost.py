@@ -44,11 +44,14 @@ def estimate(setup: Setup) -> Cost:
     Three cubes of n_max^3/3 numbers (line strengths, couplings, factors), the cross sections, and
     the populations at every output redshift. With whole shells, the strengths of every line are
     needed still, to be averaged; the cubes of what is resolved, and the border, come on top.
+    Overrides of rates take a copy of the strengths.
     """
     n, top = setup.hydrogen.n_max, setup.hydrogen.highest_resolved
     n_out = len(setup.grid.redshifts or ()) or setup.grid.n_redshifts
     border = (n - top) * top**2 / 2.0
-    cubes = 8.0 * (n**3 + (2.0 if top == n else 3.0) * top**3) / 3.0 + _BORDERS * 8.0 * border
+    copies = 2.0 if setup.rates.network else 1.0
+    cubes = 8.0 * (copies * n**3 + (2.0 if top == n else 3.0) * top**3) / 3.0
+    cubes += _BORDERS * 8.0 * border
     populations = 5 * 8.0 * n_out * (top**2 / 2.0 + n - top)
     memory = cubes + 400.0 * n**2 + populations + _RESERVE_BYTES
     low = setup.cosmology.cmb_temperature_k * (1.0 + setup.grid.redshift_end)

@@ -27,7 +27,7 @@ from ..background.cosmology import Cosmology
 from ..background.matter import compton_rate_per_s
 from ..escape.treatment import LineTreatment, ResonanceLines
 from ..escape.two_photon import with_two_photon
-from ..network.coupling import GroundCoupling
+from ..network.coupling import GroundCoupling, with_line_factors
 from ..network.reduced import Reduced, ReducedRates
 from ..network.solve import FlowSlopes, KeptSolution, flow_slopes, solve_kept
 
@@ -92,6 +92,8 @@ class SlowEquations:
     scales : Scales
         What changed constants do to Compton scattering and to Saha equilibrium; rates, energies and
         lines above hold it already.
+    escape_factor : ndarray, shape (n_lines,), dimensionless, or None
+        Overrides of the escape of each line; None: none.
     """
 
     cosmology: Cosmology
@@ -101,6 +103,7 @@ class SlowEquations:
     two_photon_rate_per_s: float
     two_photon_mode: str
     scales: Scales = UNCHANGED
+    escape_factor: FloatArray | None = None
 
     def background(self, log_scale: float) -> Background:
         """Background quantities at s = ln a."""
@@ -130,13 +133,20 @@ class SlowEquations:
             conditions.radiation_temperature_k, conditions.matter_temperature_k
         )
         coupling = with_two_photon(
-            self.treatment.couple(self.lines, kept, conditions),
+            self.line_coupling(conditions),
             kept,
             conditions,
             self.two_photon_rate_per_s,
             self.two_photon_mode,
         )
         return Local(conditions, rates, coupling, solve_kept(kept, rates, coupling, conditions))
+
+    def line_coupling(self, conditions: Conditions) -> GroundCoupling:
+        """Coupling of the lines alone, without the two-photon channel."""
+        coupling = self.treatment.couple(self.lines, self.reduced.kept, conditions)
+        if self.escape_factor is None:
+            return coupling
+        return with_line_factors(coupling, self.lines.upper, self.escape_factor)
 
     def rate(self, log_scale: float, state: FloatArray) -> FloatArray:
         """(du/ds, dv/ds)."""

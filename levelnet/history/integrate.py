@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -100,21 +100,23 @@ def slow_equations(
     Parameters
     ----------
     setup : Setup
-        Cosmology, lines, two-photon channel, constants.
+        Cosmology, lines, two-photon channel, constants, overridden rates.
     reduced : Reduced
         The interior of the atom; only the setup's open Lyman lines are used of its np levels.
     chosen : LineTreatment, optional
         In place of the one the setup names.
     """
     factor = scales(setup.physics)
+    lines = resonance_lines(reduced.kept, open_lyman_lines(setup), factor, setup.rates.network)
     return SlowEquations(
         setup.cosmology,
         reduced,
-        resonance_lines(reduced.kept, open_lyman_lines(setup), factor),
+        lines,
         chosen or member(setup.lines.hydrogen),
-        setup.hydrogen.two_photon_rate_per_s * factor.two_photon_rate,
+        setup.two_photon_rate_per_s * factor.two_photon_rate,
         setup.lines.two_photon,
-        factor,
+        replace(factor, compton_rate=factor.compton_rate * setup.rates.compton_factor),
+        setup.rates.escape_factors(reduced.kept.n[lines.upper]),
     )
 
 
@@ -169,6 +171,7 @@ def _recall(
         setup.hydrogen.energies,
         *ladder.kept.n.tolist(),
         *ladder.kept.l.tolist(),
+        *(one.key for one in setup.rates.network),
     )
 
     def recall(temperature_k: float, compute: Callable[[float], FloatArray]) -> FloatArray:

@@ -15,6 +15,9 @@ from .outputs import assemble_history
 from .result import History
 from .setup import Setup
 
+# Overridden rates that the notes list one by one; the setup holds all.
+_NOTED = 20
+
 
 def solve(
     setup: Setup,
@@ -96,4 +99,8 @@ def _notes(setup: Setup, chosen: LineTreatment) -> tuple[str, ...]:
     notes += [f"lines hold for: {text}" for text in chosen.holds_for]
     if setup.lines.two_photon == "stimulated":
         notes.append(STIMULATED_NOTE)
+    table = setup.rates.table
+    notes += [f"rate overridden: {one.text} ({one.source})" for one in table[:_NOTED]]
+    if len(table) > _NOTED:
+        notes.append(f"rates overridden: {len(table) - _NOTED} more, listed in the setup")
     return tuple(notes)

@@ -11,7 +11,9 @@ from typing import Annotated, Any
 
 from pydantic import Field
 
+from ..atomic.overrides import Rates
 from ..atomic.physics import Physics
+from ..atomic.selection import AtomSize
 from ..atomic.species import Helium, Hydrogen
 from ..background.cosmology import Cosmology
 from ..errors import InputError
@@ -97,6 +99,8 @@ class Setup:
         Tolerances.
     physics : Physics, optional
         Changed constants of nature.
+    rates : Rates, optional
+        Overridden rates.
     title : str, optional
         Any text; stored with the result.
 
@@ -112,6 +116,7 @@ class Setup:
     grid: Annotated[Grid, from_mapping(Grid)] = Grid()
     accuracy: Annotated[Accuracy, from_mapping(Accuracy)] = Accuracy()
     physics: Annotated[Physics, from_mapping(Physics)] = Physics()
+    rates: Annotated[Rates, from_mapping(Rates)] = Rates()
     title: str = ""
 
     def __post_init__(self) -> None:
@@ -128,6 +133,12 @@ class Setup:
                 f"lines.lyman_lines = {count!r}: only levels resolved in l can have open Lyman "
                 f"lines: with hydrogen.resolve_l_to = {top} give a number from 1 to {top - 1}"
             )
+        self.rates.check(AtomSize(n_max, top, n_max - 1 if isinstance(count, str) else count))
+
+    @property
+    def two_photon_rate_per_s(self) -> float:
+        """2s-1s rate in s^-1 with its override, before any change of constants."""
+        return self.rates.two_photon_rate_per_s(self.hydrogen.two_photon_rate_per_s)
 
     def to_toml(self) -> str:
         """Write the setup as TOML text; :func:`parse_setup` gives it back equal."""
@@ -142,10 +153,15 @@ class Setup:
 
 
 def _plain(values: Mapping[str, Any]) -> dict[str, Any]:
-    """Drop what is not set (TOML has no null); scalars before tables, as TOML wants."""
+    """Drop what is not set (TOML has no null); scalars before tables, as TOML wants.
+
+    A part that sets nothing is no table either, so that a setup keeps its digest when the program
+    learns new choices.
+    """
     kept = {key: value for key, value in values.items() if value is not None}
     scalars = {k: v for k, v in kept.items() if not isinstance(v, Mapping)}
     tables = {k: _plain(v) for k, v in kept.items() if isinstance(v, Mapping)}
+    tables = {k: v for k, v in tables.items() if v}
     return {k: list(v) if isinstance(v, tuple) else v for k, v in scalars.items()} | tables
 
 

@@ -6,7 +6,7 @@ from dataclasses import dataclass, field, replace
 
 import numpy as np
 
-from ..arrays import FloatArray
+from ..arrays import FloatArray, IntArray
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -82,3 +82,35 @@ def with_decay(
     source[kept] += rate_per_s * boltzmann
     slope_temperature[kept, kept] += rate_per_s * slope
     return replace(coupling, loss=loss, source=source, slope_temperature=slope_temperature)
+
+
+def with_line_factors(
+    coupling: GroundCoupling, upper: IntArray, factor: FloatArray
+) -> GroundCoupling:
+    """Multiply the net flow of each line by a factor; detailed balance holds as before.
+
+    Parameters
+    ----------
+    coupling : GroundCoupling
+        Of the lines alone.
+    upper : ndarray of int, shape (n_lines,)
+        Position of the upper level of each line among the kept levels.
+    factor : ndarray, shape (n_lines,), dimensionless
+        Factors.
+
+    Returns
+    -------
+    GroundCoupling
+        Rows of K, of its slopes and of the sources multiplied; `validity` stays what the treatment
+        said.
+    """
+    by_level = np.ones(len(coupling.source))
+    by_level[upper] = factor
+    return replace(
+        coupling,
+        loss=coupling.loss * by_level[:, None],
+        source=coupling.source * by_level,
+        slope_column=coupling.slope_column * by_level[:, None],
+        slope_temperature=coupling.slope_temperature * by_level[:, None],
+        excess_source=coupling.excess_source * by_level,
+    )

@@ -13,6 +13,8 @@ from ..arrays import BoolArray, FloatArray, IntArray
 from ..atomic.bound_bound import DipoleBlocks, dipole_blocks
 from ..atomic.bound_free import BoundFree, bound_free
 from ..atomic.levels import LevelSet, hydrogenic_levels, ionization_scale_ev
+from ..atomic.overridden import with_overrides
+from ..atomic.overrides import Override
 from ..atomic.shells import Shells, whole_shells
 from ..errors import InputError
 from ..numerics.block_system import BlockShape
@@ -125,6 +127,7 @@ def hydrogen_ladder(
     energies: str,
     kept: tuple[tuple[int, int], ...],
     resolve_l_to: int | None = None,
+    overrides: tuple[Override, ...] = (),
 ) -> Ladder:
     """Build the ladder of hydrogen.
 
@@ -139,6 +142,8 @@ def hydrogen_ladder(
         in l.
     resolve_l_to : int, optional
         Highest n with levels resolved in l, 2 to n_max; None: n_max.
+    overrides : tuple of Override, optional
+        Factors on lines and cross sections, those inside whole shells too.
 
     Returns
     -------
@@ -152,7 +157,8 @@ def hydrogen_ladder(
     if np.any((n < 2) | (n > top) | (l < 0) | (l >= n)):
         raise InputError(f"kept levels {kept}: allowed are (n, l) with 2 <= n <= {top}, 0 <= l < n")
     levels = hydrogenic_levels(n_max, energies, resolve_l_to=top)
-    lines, continuum, shells = whole_shells(*_atomic_data(n_max, 1), top)
+    resolved = with_overrides(*_atomic_data(n_max, 1), overrides, n_max)
+    lines, continuum, shells = whole_shells(*resolved, top)
     position = level_position(n, l)
     plain = ionization_scale_ev(1) / levels.n.astype(float) ** 2
     return Ladder(

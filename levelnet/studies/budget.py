@@ -1,0 +1,245 @@
+"""The error budget: from uncertain rates, by the derivatives of a weighing, to its targets.
+
+Linear: the relative error of a target is the sum over rates of d ln J / d ln R times the relative
+error of R. All rates of one row err together, by one common factor; rows of one group too, each by
+its own sigma, so that their contributions add with their signs. Different groups, and rows without
+a group, are independent and add in squares.
+"""
+
+from __future__ import annotations
+
+import re
+from collections.abc import Sequence
+from dataclasses import dataclass
+from pathlib import Path
+from typing import NamedTuple
+
+import numpy as np
+
+import atomic_tables
+
+from ..arrays import FloatArray, frozen_array
+from ..atomic.selection import Selector, level_mask, line_mask, pair_mask
+from ..atomic.selector_rows import (
+    SELECTOR_COLUMNS,
+    SelectorRow,
+    number_in,
+    parse_rows,
+    read_rows,
+)
+from ..errors import InputError
+from ..tables import read_table
+from .weighing import Weighing
+
+COLUMNS = (*SELECTOR_COLUMNS, "sigma", "group", "source")
+DEFAULT_TABLE = "hydrogen/rate_uncertainties"
+LARGEST_SIGMA = 1.0
+_ELECTRONS = re.compile(r"x_e\((.*)\)")
+
+
+@dataclass(frozen=True, slots=True)
+class Uncertainty:
+    """One row: how uncertain the selected rates are.
+
+    Attributes
+    ----------
+    where : str
+        "my.csv, row 3", for messages.
+    number : int
+        The row, from 1.
+    selector : Selector
+        The rates.
+    sigma : float, 0 to 1 (dimensionless)
+        Relative 1-sigma uncertainty, common to all of them.
+    group : str
+        Rows of the same group err together; "" for a row of its own.
+    source : str
+        Where the number comes from.
+    """
+
+    where: str
+    number: int
+    selector: Selector
+    sigma: float
+    group: str
+    source: str
+
+
+class Contribution(NamedTuple):
+    """What one group adds to the error of a target: its relative error at +1 sigma, with sign."""
+
+    group: str
+    contribution: float
+    source: str
+
+
+class Band(NamedTuple):
+    """x_e(z) with its 1-sigma error, redshift descending; every array of shape (n_redshift,)."""
+
+    redshift: FloatArray
+    free_electron_fraction: FloatArray
+    sigma: FloatArray
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class ErrorBudget:
+    """Errors of targets from uncertain rates, by source; n_targets is the first axis.
+
+    Attributes
+    ----------
+    targets, units : tuple of str, length n_targets
+        As in the weighing.
+    value : ndarray, shape (n_targets,)
+        The targets, in their units.
+    sigma : ndarray, shape (n_targets,), dimensionless
+        Relative 1-sigma error: contributions added in squares.
+    groups : tuple of str, length n_groups
+        What errs together: a group of the table, or a row of its own named by its selector.
+    contribution : ndarray, shape (n_targets, n_groups), dimensionless
+        Relative change of each target where the rates of one group are higher by 1 sigma.
+    sources : tuple of str, length n_groups
+        Where the uncertainties come from.
+    """
+
+    targets: tuple[str, ...]
+    units: tuple[str, ...]
+    value: FloatArray
+    sigma: FloatArray
+    groups: tuple[str, ...]
+    contribution: FloatArray
+    sources: tuple[str, ...]
+
+    def __post_init__(self) -> None:
+        """Check shapes and make every array read-only."""
+        count = len(self.targets)
+        for name in ("value", "sigma"):
+            frozen_array(self, name, (count,))
+        frozen_array(self, "contribution", (count, len(self.groups)))
+
+    def ranked(self, target: str) -> tuple[Contribution, ...]:
+        """Contributions to the error of one target, the largest first."""
+        if target not in self.targets:
+            raise InputError(f'target "{target}": in the budget are {", ".join(self.targets)}')
+        row = self.contribution[self.targets.index(target)]
+        order = np.argsort(-np.abs(row), kind="stable").tolist()
+        return tuple(Contribution(self.groups[k], float(row[k]), self.sources[k]) for k in order)
+
+    def band(self) -> Band:
+        """x_e(z) with its absolute 1-sigma error, from the targets "x_e(Z)"; empty without any."""
+        found = [(k, _ELECTRONS.fullmatch(name)) for k, name in enumerate(self.targets)]
+        places = [(float(match[1]), k) for k, match in found if match is not None]
+        order = [k for _, k in sorted(places, reverse=True)]
+        redshift = np.array([z for z, _ in sorted(places, reverse=True)])
+        return Band(redshift, self.value[order], np.abs(self.value[order]) * self.sigma[order])
+
+
+def load_uncertainties(path: str | Path | None = None) -> tuple[Uncertainty, ...]:
+    """Read how uncertain rates are.
+
+    Parameters
+    ----------
+    path : str or Path, optional
+        A CSV file with the columns ``process,upper,lower,sigma,group,source``; None: the table of
+        published uncertainties, ``hydrogen/rate_uncertainties`` of `atomic_tables`.
+
+    Returns
+    -------
+    tuple of Uncertainty
+        One for each row.
+
+    Raises
+    ------
+    InputError
+        If the file cannot be read, has another header or no rows, or a row has a process or level
+        that is not known, a sigma that is no number or outside 0 to 1, or no source. One line with
+        the row, counted from 1 below the header.
+    """
+    if path is None:
+        read_table(DEFAULT_TABLE)  # holds it against its checksum
+        path = atomic_tables.path(f"{DEFAULT_TABLE}.csv")
+    rows = parse_rows(read_rows(path, COLUMNS), COLUMNS, str(path))
+    return tuple(_uncertainty(row) for row in rows)
+
+
+def _uncertainty(row: SelectorRow) -> Uncertainty:
+    sigma = number_in(row, "sigma")
+    if not 0.0 <= sigma <= LARGEST_SIGMA:
+        raise InputError(
+            f"{row.where}: sigma = {sigma:g}: allowed are relative uncertainties from 0 to "
+            f"{LARGEST_SIGMA:g}"
+        )
+    if not row.cells["source"]:
+        raise InputError(f"{row.where}: source is empty; say where the number comes from")
+    group, source = row.cells["group"], row.cells["source"]
+    return Uncertainty(row.where, row.number, row.selector, sigma, group, source)
+
+
+def error_budget(weighing: Weighing, uncertainties: Sequence[Uncertainty]) -> ErrorBudget:
+    """Propagate uncertain rates to the targets of a weighing.
+
+    Parameters
+    ----------
+    weighing : Weighing
+        Derivatives of the targets by every rate.
+    uncertainties : sequence of Uncertainty
+        From :func:`load_uncertainties`; at least one. Two rows may select the same rate: they
+        are two reasons why it is uncertain.
+
+    Returns
+    -------
+    ErrorBudget
+        Relative errors in the linear approximation, in all and by group.
+
+    Raises
+    ------
+    InputError
+        If a row selects nothing in the atom that was weighed.
+
+    References
+    ----------
+    JCGM 100:2008, Guide to the Expression of Uncertainty in Measurement, sec. 5 (propagation of
+    correlated and uncorrelated uncertainties; from memory).
+    """
+    if not uncertainties:
+        raise InputError("uncertainties: empty; at least one row is needed")
+    names = [one.group or f"{one.selector.text} (row {one.number})" for one in uncertainties]
+    groups = tuple(dict.fromkeys(names))
+    contribution = np.zeros((len(weighing.targets), len(groups)))
+    sources: list[list[str]] = [[] for _ in groups]
+    for name, one in zip(names, uncertainties, strict=True):
+        group = groups.index(name)
+        contribution[:, group] += one.sigma * derivatives(weighing, one)
+        if one.source not in sources[group]:
+            sources[group].append(one.source)
+    return ErrorBudget(
+        weighing.targets,
+        weighing.units,
+        weighing.value,
+        np.sqrt(np.sum(contribution**2, axis=1)),
+        groups,
+        contribution,
+        tuple("; ".join(texts) for texts in sources),
+    )
+
+
+def derivatives(weighing: Weighing, one: Uncertainty) -> FloatArray:
+    """Give d ln J / d ln of a common factor on the selected rates, shape (n_targets,)."""
+    process = one.selector.process
+    if process in {"two_photon", "compton"}:
+        single: FloatArray = getattr(weighing, process)
+        return single
+    if process == "bound_bound":
+        chosen = pair_mask(one.selector, weighing.levels, weighing.upper, weighing.lower)
+    elif process == "bound_free":
+        chosen = level_mask(one.selector, weighing.levels)
+    else:
+        # Lines are named "2p-1s", "13p-1s".
+        n_upper = np.array([int(name.partition("p")[0]) for name in weighing.lines], dtype=int)
+        chosen = line_mask(one.selector, n_upper)
+    if not chosen.any():
+        raise InputError(
+            f'{one.where}: selector "{one.selector.text}" matches nothing among the '
+            f"{len(weighing.levels)} levels and the lines {', '.join(weighing.lines)} weighed"
+        )
+    total: FloatArray = getattr(weighing, process)[:, chosen].sum(axis=1)
+    return total
