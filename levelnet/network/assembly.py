@@ -247,7 +247,7 @@ def _factor_warm(
     inside = ladder.interior
     root = np.exp(log_root)
     kt = const.BOLTZMANN_EV_K * temperature_k
-    geometric, stretch = _half_angle_tables(ladder, kt)
+    geometric, stretch = half_angle_tables(ladder, kt)
     n_unknowns = inside.shape.n_unknowns
     upward, downward, diagonal = np.empty((3, n_unknowns))
     symmetric_blocks(
@@ -277,7 +277,7 @@ def _factor_warm(
     return solver, diagonal
 
 
-def _half_angle_tables(ladder: Ladder, kt_ev: float) -> tuple[FloatArray, FloatArray]:
+def half_angle_tables(ladder: Ladder, kt_ev: float) -> tuple[FloatArray, FloatArray]:
     """1/(2 sinh(x/2)) and 1/(e^x - 1) over (n, n'), shape (n_max + 1, n_max + 1)."""
     term = np.zeros(ladder.n_max + 1)
     term[1:] = ionization_scale_ev(ladder.charge) / kt_ev / np.arange(1.0, ladder.n_max + 1) ** 2
