@@ -40,6 +40,31 @@ class ChebyshevSeries:
         coefficients[0] *= 0.5
         return ChebyshevSeries(low, high, coefficients)
 
+    @property
+    def nodes(self) -> FloatArray:
+        """Where the values were given, shape (n_nodes,)."""
+        return chebyshev_nodes(self.low, self.high, len(self.coefficients))
+
+    def node_weights(self, x: FloatArray) -> FloatArray:
+        """Weight of the value at each node in the interpolated value at each `x` inside.
+
+        Parameters
+        ----------
+        x : ndarray, shape (n_points,)
+            Places between `low` and `high`.
+
+        Returns
+        -------
+        ndarray, shape (n_points, n_nodes)
+            Each row sums to 1.
+        """
+        middle, half = 0.5 * (self.low + self.high), 0.5 * (self.high - self.low)
+        angle = np.arccos(np.clip((x - middle) / half, -1.0, 1.0))
+        order = np.arange(len(self.coefficients))
+        unit = ChebyshevSeries.fit(self.low, self.high, np.eye(len(order))).coefficients
+        weights: FloatArray = np.cos(angle[:, None] * order) @ unit
+        return weights
+
     def evaluate(self, x: float) -> tuple[FloatArray, FloatArray]:
         """Values and derivatives at `x`, each of shape (n_functions,); RangeError outside."""
         middle, half = 0.5 * (self.low + self.high), 0.5 * (self.high - self.low)
