@@ -13,6 +13,8 @@ from numpy.typing import ArrayLike
 from ..arrays import FloatArray, frozen_array
 from ..atomic.physics import Physics, scales
 from ..background.cosmology import Cosmology
+from ..background.parameters import COSMOLOGICAL
+from ..background.quadrature import Quadrature
 from ..errors import InputError, Outcome, RangeError, SolveError
 from ..escape.lines import Lines
 from ..kernels.effective import (
@@ -23,10 +25,10 @@ from ..kernels.effective import (
     Atom,
     effective_history,
 )
-from .observables import Observables, Quadrature, observe, quadrature
+from .observables import Observables, observe_run, table_quadrature
 from .prepared import choose_physics, make_atom, rate_names, scale_factors
 from .table import EffectiveTable
-from .universe import CONSTANTS, COSMOLOGICAL, make_drive, make_universe
+from .universe import CONSTANTS, make_drive, make_universe
 
 # Local error allowed in a step over the error asked of x_e; with it x_e was measured to a quarter.
 _LOCAL = 2.0
@@ -224,11 +226,12 @@ def history_from_table(  # noqa: PLR0913 (each is a choice of the caller)
     _check_range(atom, cosmology, redshift)
     drive = _drive(table, cosmology, physics) if sensitivities else None
     outputs = -np.log1p(redshift)
-    grid = quadrature(atom, cosmology, outputs[-1]) if observables or sensitivities else None
+    wanted = observables or sensitivities
+    grid = table_quadrature(atom, cosmology, float(outputs[-1])) if wanted else None
     run = _run(atom, cosmology, outputs, grid, drive, relative)
     if grid is None:
         return _assemble(cosmology, redshift, run, None, None)
-    seen, slopes = observe(
+    seen, slopes = observe_run(
         cosmology, grid, run.grid_state, run.grid_slope, drive, scales(physics).thomson
     )
     if drive is None:

@@ -11,8 +11,9 @@ import numpy as np
 import pytest
 
 from levelnet.background.cosmology import Cosmology
+from levelnet.background.parameters import COSMOLOGICAL, hubble_derivatives
 from levelnet.distilled.history import FastHistory, history_from_table
-from levelnet.distilled.universe import CONSTANTS, COSMOLOGICAL, hubble_derivatives
+from levelnet.distilled.universe import CONSTANTS
 from tests.fast_tables import small_table
 from tests.small_runs import COSMOLOGY
 
@@ -107,7 +108,7 @@ def test_derivatives_at_the_default_accuracy(universe: str) -> None:
 def test_derivatives_of_the_expansion(universe: str) -> None:
     cosmology = UNIVERSES[universe]
     z = np.array([0.0, 0.5, 3.0, 30.0, 300.0, 3000.0])
-    found = hubble_derivatives(cosmology, 1.0 + z, len(COSMOLOGICAL))
+    found = hubble_derivatives(cosmology, 1.0 + z)
     for k, name in enumerate(COSMOLOGICAL):
         value = getattr(cosmology, name)
         sides = []

@@ -1,0 +1,210 @@
+"""What an observer measures of an ionization history, with its exact derivatives.
+
+With s = ln a, n_e = x_e n_H, H the expansion rate, R = 3 rho_b/(4 rho_gamma),
+c_s = c/sqrt(3 (1 + R)), eta conformal time, and z_end the lowest redshift of the history:
+
+    tau(z)   = int_{z_end}^{z} c sigma_T n_e dz/(H (1 + z))          tau(z_*) = 1
+    tau_d(z) = int_{z_end}^{z} c sigma_T n_e dz/(H (1 + z) R)        tau_d(z_drag) = 1
+    g(eta)   = (d tau/d eta) exp(-tau)                               peak; width at half maximum
+    r_s(z)   = int_{z}^{infinity} c_s dz/H                           at z_* and at z_drag
+    1/k_D^2  = int_0^{eta_*} d eta [R^2/(1 + R) + 16/15]/[6 (1 + R) a n_e sigma_T]
+    t(z)     = int_{z}^{infinity} dz/(H (1 + z))                     at z_*
+
+There is no reionization in any of them. Above the first point x_e counts as 1: only k_D sees it, by
+a relative error no larger than half the neutral fraction there (1e-8 at T_r = 9000 K, 3e-6 at 7000
+K), for what lies above adds less than all of 1/k_D^2. Tight coupling, on which k_D rests, is taken
+to hold up to z_*, as in the references, although it ceases there.
+
+Every observable is a functional of ln(sigma_T n_e), ln H and ln R; its change is kept as weights on
+these three at the points of the quadrature, from which all derivatives follow.
+
+References
+----------
+Hu & Sugiyama 1996, ApJ 471, 542 (tau, visibility, drag epoch, damping); Kaiser 1983, MNRAS 202,
+1169 (16/15: with polarization); Eisenstein & Hu 1998, ApJ 496, 605 (r_s at the drag epoch).
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass
+
+import numpy as np
+
+from ..arrays import FloatArray, frozen_array
+from ..errors import InputError
+from .cosmology import Cosmology
+from .parameters import (
+    COSMOLOGICAL,
+    hubble_derivatives,
+    hydrogen_derivatives,
+    loading_derivatives,
+)
+from .quadrature import Quadrature
+from .scattering import DAMPING, DEPTH, SOUND, TIME, Event, Found, Scattering
+
+UNITS = {
+    "last_scattering_redshift": "1",
+    "visibility_peak_redshift": "1",
+    "visibility_width": "1",
+    "last_scattering_time_s": "s",
+    "sound_horizon_mpc": "Mpc",
+    "damping_per_mpc": "Mpc^-1",
+    "drag_redshift": "1",
+    "drag_horizon_mpc": "Mpc",
+}
+"""Unit of each observable; "1" where there is none, Mpc comoving."""
+OBSERVABLES = tuple(UNITS)
+"""Names of the observables, besides optical_depth(Z)."""
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Observed:
+    """Observables and their derivatives; NaN where the history does not reach the event.
+
+    Attributes
+    ----------
+    names, units : tuple of str, length n_observables
+        As in `UNITS`, then "optical_depth(Z)".
+    value : ndarray, shape (n_observables,)
+        Values in these units.
+    gradient : ndarray, shape (n_observables, n_points)
+        By ln x_e at each point of the quadrature, in these units: a weight vector, so that the
+        observable changes by gradient @ (d ln x_e). x_e above the first point is held at 1.
+    by_parameter : ndarray, shape (n_observables, 6)
+        By each of `COSMOLOGICAL`, per unit of each, at fixed x_e(s).
+    by_thomson : ndarray, shape (n_observables,)
+        By ln sigma_T, at fixed x_e(s).
+    """
+
+    names: tuple[str, ...]
+    units: tuple[str, ...]
+    value: FloatArray
+    gradient: FloatArray
+    by_parameter: FloatArray
+    by_thomson: FloatArray
+
+    def __post_init__(self) -> None:
+        """Check shapes and make every array read-only."""
+        n = len(self.names)
+        frozen_array(self, "value", (n,))
+        frozen_array(self, "gradient", (n, self.gradient.shape[-1]))
+        frozen_array(self, "by_parameter", (n, len(COSMOLOGICAL)))
+        frozen_array(self, "by_thomson", (n,))
+
+
+def at_redshift(quantity: str, redshift: float) -> str:
+    """Name of a quantity at a redshift (dimensionless): "x_e(900)", "optical_depth(1100.5)"."""
+    return f"{quantity}({repr(float(redshift)).removesuffix('.0')})"
+
+
+def observe(
+    cosmology: Cosmology,
+    grid: Quadrature,
+    electron_fraction: FloatArray,
+    thomson: float = 1.0,
+    optical_depth_to: Sequence[float] = (),
+    names: Sequence[str] = OBSERVABLES,
+) -> Observed:
+    """Observables of a history, with derivatives by x_e at every point.
+
+    Parameters
+    ----------
+    cosmology : Cosmology
+        The background.
+    grid : Quadrature
+        From :func:`levelnet.background.quadrature.quadrature`; from where hydrogen is fully ionized
+        to the lowest redshift.
+    electron_fraction : ndarray, shape (n_points,), dimensionless
+        n_e/n_H at its points, positive.
+    thomson : float, dimensionless
+        Thomson cross section over the measured one.
+    optical_depth_to : sequence of float, dimensionless
+        Redshifts Z for optical_depth(Z), from z_end up to Z; NaN outside the grid.
+    names : sequence of str
+        Which of `OBSERVABLES`.
+
+    Raises
+    ------
+    InputError
+        If an electron fraction is not positive and finite, or their number is wrong.
+    """
+    ionized = np.asarray(electron_fraction, dtype=float)
+    if ionized.shape != grid.points.shape or not np.all((ionized > 0.0) & np.isfinite(ionized)):
+        raise InputError(f"electron_fraction: {len(grid.points)} positive numbers are needed")
+    seen = Scattering(cosmology, grid, ionized, thomson)
+    found = [_MAKERS[name](seen) for name in names]
+    found += [_optical_depth(seen, z) for z in optical_depth_to]
+    nothing = math.nan, np.full((3, len(seen.s)), math.nan)
+    found_or_nan = [nothing if one is None else one for one in found]
+    value = np.array([one[0] for one in found_or_nan])
+    change = np.array([one[1] for one in found_or_nan]).reshape(-1, 3, len(seen.s))
+    by_opacity, by_load = change[:, 0].sum(axis=1), change[:, 2].sum(axis=1)
+    by_parameter = change[:, 1] @ hubble_derivatives(cosmology, np.exp(-seen.s))
+    by_parameter += np.outer(by_opacity, hydrogen_derivatives(cosmology))
+    by_parameter += np.outer(by_load, loading_derivatives(cosmology))
+    depths = [at_redshift("optical_depth", z) for z in optical_depth_to]
+    return Observed(
+        (*names, *depths),
+        (*(UNITS[name] for name in names), *("1" for _ in depths)),
+        value,
+        change[:, 0, seen.n_early :],
+        by_parameter,
+        by_opacity,
+    )
+
+
+def _redshift(seen: Scattering, event: Event | None) -> Found | None:
+    return None if event is None else _reached(seen, event)
+
+
+def _reached(seen: Scattering, event: Event) -> Found:
+    growth = math.exp(-seen.grid.log_scale(event.place))
+    return growth - 1.0, -growth * event.shift
+
+
+def _horizon(seen: Scattering, event: Event | None) -> Found | None:
+    return None if event is None else seen.integral(SOUND, event)
+
+
+def _damping(seen: Scattering, event: Event | None) -> Found | None:
+    if event is None:
+        return None
+    square, change = seen.integral(DAMPING, event)
+    return square**-0.5, -0.5 * square**-1.5 * change
+
+
+def _time(seen: Scattering, event: Event | None) -> Found | None:
+    return None if event is None else seen.integral(TIME, event)
+
+
+def _width(seen: Scattering) -> Found | None:
+    """Full width at half maximum of g(eta), in redshift."""
+    if seen.peak is None:
+        return None
+    ends = seen.half_maximum(seen.peak)
+    if ends is None:
+        return None
+    (high, by_high), (low, by_low) = (_reached(seen, end) for end in ends)
+    return high - low, by_high - by_low
+
+
+def _optical_depth(seen: Scattering, redshift: float) -> Found | None:
+    place = seen.grid.place(-math.log1p(redshift)) if redshift > -1.0 else None
+    if place is None:
+        return None
+    weight = seen.after(place)
+    return float(seen.value[DEPTH] @ weight), seen.change(DEPTH, weight)
+
+
+_MAKERS: dict[str, Callable[[Scattering], Found | None]] = {
+    "last_scattering_redshift": lambda seen: _redshift(seen, seen.last),
+    "visibility_peak_redshift": lambda seen: _redshift(seen, seen.peak),
+    "visibility_width": _width,
+    "last_scattering_time_s": lambda seen: _time(seen, seen.last),
+    "sound_horizon_mpc": lambda seen: _horizon(seen, seen.last),
+    "damping_per_mpc": lambda seen: _damping(seen, seen.last),
+    "drag_redshift": lambda seen: _redshift(seen, seen.drag),
+    "drag_horizon_mpc": lambda seen: _horizon(seen, seen.drag),
+}
