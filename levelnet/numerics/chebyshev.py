@@ -5,7 +5,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
-from scipy.fft import dct
+from scipy.fft import dct, idct
 
 from ..arrays import FloatArray
 from ..errors import RangeError
@@ -44,6 +44,15 @@ class ChebyshevSeries:
     def nodes(self) -> FloatArray:
         """Where the values were given, shape (n_nodes,)."""
         return chebyshev_nodes(self.low, self.high, len(self.coefficients))
+
+    @property
+    def values_at_nodes(self) -> FloatArray:
+        """The values there, shape (n_nodes, n_functions)."""
+        count = len(self.coefficients)
+        scaled = self.coefficients * count
+        scaled[0] *= 2.0
+        values: FloatArray = idct(scaled, type=2, axis=0)[::-1]
+        return values
 
     def node_weights(self, x: FloatArray) -> FloatArray:
         """Weight of the value at each node in the interpolated value at each `x` inside.

@@ -65,6 +65,7 @@ def freeze(
     setup: Setup,
     redshifts: Sequence[float],
     keeps: tuple[tuple[int, int], ...],
+    start_above: float,
     tell: Progress,
     pieces: Pieces | None = None,
 ) -> FrozenHistory:
@@ -78,6 +79,8 @@ def freeze(
         Redshifts that must be edges of steps.
     keeps : tuple of (n, l)
         Levels to keep from elimination.
+    start_above : float, dimensionless
+        Redshift above which the integration must start.
     tell, pieces
         As for :func:`levelnet.solve`.
     """
@@ -91,7 +94,7 @@ def freeze(
     grid = replace(
         setup.grid, redshift_start=wanted[-1], redshifts=tuple(wanted), n_redshifts=len(wanted)
     )
-    above = _HEADROOM * (1.0 + wanted[-1]) - 1.0
+    above = max(start_above, _HEADROOM * (1.0 + wanted[-1]) - 1.0)
     chosen = replace(setup, grid=grid)
     integrated = integrate_history(chosen, tell, pieces, keeps=keeps, start_above=above)
     trajectory = integrated.trajectory

@@ -1,0 +1,217 @@
+"""Scalars of a frozen history: their values, and what they hang on directly."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+
+from ..arrays import FloatArray, IntArray
+from ..background.last_scattering import OBSERVABLES, Observed, observe
+from ..background.parameters import COSMOLOGICAL
+from ..background.quadrature import quadrature
+from ..constants import BOLTZMANN_EV_K
+from ..history.equations import Linearized, ionized_and_neutral
+from ..network.assembly import kept_line_rates
+from ..network.gradient import (
+    FlowGradient,
+    FlowSlopes,
+    channel_gradient,
+    flow_slopes,
+    line_gradient,
+)
+from ..numerics.collocation import WEIGHTS, interpolation
+from .frozen import FrozenHistory
+from .targets import Target
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class LineFlow:
+    """Net flow in one line at every stage; arrays of shape (n_steps, 3).
+
+    Attributes
+    ----------
+    scalar : int
+        Which scalar is its integral.
+    weight : ndarray, s
+        What a flow at a stage counts in the integral over time.
+    flow : ndarray, s^-1
+        Net transitions per hydrogen nucleus.
+    gradient : list of FlowGradient, length 3 n_steps
+        By the rates, those of the line itself held.
+    slopes : list of FlowSlopes, length 3 n_steps
+        By the conditions, those of the line's own rates held.
+    own_slope : ndarray, s^-1
+        Derivative by ln T_r through the line's own rates.
+    ends : tuple of int, or None
+        Positions of upper and lower among the kept levels; None for a line to the ground state.
+    """
+
+    scalar: int
+    weight: FloatArray
+    flow: FloatArray
+    gradient: list[FlowGradient]
+    slopes: list[FlowSlopes]
+    own_slope: FloatArray
+    ends: tuple[int, int] | None
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Scalars:
+    """Several scalars J of one history, and the direct part of their derivatives.
+
+    Attributes
+    ----------
+    value : ndarray, shape (n_scalars,)
+        J.
+    by_state : ndarray, shape (n_scalars, n_steps, 3, 2)
+        dJ by the states at the stages.
+    by_parameter : ndarray, shape (n_scalars, 6)
+        dJ by each parameter of the cosmology, states held.
+    lines : tuple of LineFlow
+        Line strengths among the scalars, which hang on the rates directly.
+    """
+
+    value: FloatArray
+    by_state: FloatArray
+    by_parameter: FloatArray
+    lines: tuple[LineFlow, ...]
+
+
+def scalars_of(history: FrozenHistory, targets: Sequence[Target]) -> Scalars:
+    """Evaluate every target on a history."""
+    steps = history.solution.stages.shape[0]
+    made = Scalars(
+        np.zeros(len(targets)),
+        np.zeros((len(targets), steps, 3, 2)),
+        np.zeros((len(targets), len(COSMOLOGICAL))),
+        (),
+    )
+    lines = []
+    for k, target in enumerate(targets):
+        if target.kind in {"x_e", "T_m"}:
+            _put_state(history, target, k, made)
+        elif target.kind == "line":
+            lines.append(_put_line(history, target, k, made))
+    _put_observables(history, targets, made)
+    return Scalars(made.value, made.by_state, made.by_parameter, tuple(lines))
+
+
+def _put_state(history: FrozenHistory, target: Target, k: int, made: Scalars) -> None:
+    """x_e or T_m at the end of a step."""
+    edge = history.edge(target.redshift)
+    state = history.solution.state_at(edge)
+    ionized, neutral = ionized_and_neutral(float(state[0]))
+    if target.kind == "x_e":
+        made.value[k] = ionized
+        made.by_state[k, edge - 1, 2, 0] = ionized * neutral
+        return
+    cosmology = history.setup.cosmology
+    radiation_k = float(cosmology.radiation_temperature_k(target.redshift))
+    made.value[k] = radiation_k * math.exp(float(state[1]))
+    made.by_state[k, edge - 1, 2, 1] = made.value[k]
+    made.by_parameter[k, 3] = made.value[k] / cosmology.cmb_temperature_k
+
+
+def _put_observables(history: FrozenHistory, targets: Sequence[Target], made: Scalars) -> None:
+    """Everything that is an integral over x_e."""
+    wanted = [k for k, t in enumerate(targets) if t.name in OBSERVABLES]
+    depths = [k for k, t in enumerate(targets) if t.kind == "optical_depth"]
+    if not wanted and not depths:
+        return
+    solution, cosmology = history.solution, history.setup.cosmology
+    grid = quadrature(cosmology, float(solution.edges[0]), float(solution.edges[-1]))
+    step, weight = _cubic(history, grid.points)
+    before = np.array([solution.state_at(k)[0] for k in range(len(solution.edges) - 1)])
+    knots = np.concatenate([before[:, None], solution.stages[:, :, 0]], axis=1)
+    log_odds = (weight * knots[step]).sum(axis=1)
+    pairs = np.array([ionized_and_neutral(u) for u in log_odds.tolist()])
+    seen: Observed = observe(
+        cosmology,
+        grid,
+        pairs[:, 0],
+        history.equations.scales.thomson,
+        [targets[k].redshift for k in depths],
+        [targets[k].name for k in wanted],
+    )
+    for row, k in enumerate((*wanted, *depths)):
+        made.value[k] = seen.value[row]
+        made.by_parameter[k] = seen.by_parameter[row]
+        # d ln x_e = x_HI du; the start of a step is the last stage of the one before.
+        moved = (seen.gradient[row] * pairs[:, 1])[:, None] * weight
+        np.add.at(made.by_state[k, :, :, 0], step, moved[:, 1:])
+        inner = step > 0
+        np.add.at(made.by_state[k, :, 2, 0], step[inner] - 1, moved[inner, 0])
+
+
+def _cubic(history: FrozenHistory, points: FloatArray) -> tuple[IntArray, FloatArray]:
+    """Step of each point (in ln a), and weights of its start and stages, shape (n_points, 4)."""
+    edges = history.solution.edges
+    step = np.clip(np.searchsorted(edges, points, side="right") - 1, 0, len(edges) - 2)
+    place = (points - edges[step]) / np.diff(edges)[step]
+    return step, interpolation(place)
+
+
+def _put_line(history: FrozenHistory, target: Target, k: int, made: Scalars) -> LineFlow:
+    """Time-integrated net transitions of one line per hydrogen nucleus."""
+    solution, kept = history.solution, list(history.equations.reduced.kept)
+    upper = kept.index(target.upper)
+    lower = None if target.lower == (1, 0) else kept.index(target.lower)
+    shape = solution.times.shape
+    flow, own_slope, weight = np.zeros(shape), np.zeros(shape), np.zeros(shape)
+    gradients: list[FlowGradient] = []
+    slopes: list[FlowSlopes] = []
+    for j, row in enumerate(solution.linear):
+        for i, one in enumerate(row):
+            here = one.here
+            found = _channel(here, upper) if lower is None else _line(history, here, upper, lower)
+            flow[j, i], own_slope[j, i], gradient = found
+            weight[j, i] = solution.steps[j] * WEIGHTS[i] / here.local.conditions.hubble_rate_per_s
+            gradients.append(gradient)
+            slopes.append(_slopes(history, here, gradient))
+            made.by_state[k, j, i] = weight[j, i] * _by_state(here, slopes[-1])
+    made.value[k] = (weight * flow).sum()
+    return LineFlow(
+        k, weight, flow, gradients, slopes, own_slope, None if lower is None else (upper, lower)
+    )
+
+
+def _channel(here: Linearized, kept: int) -> tuple[float, float, FlowGradient]:
+    local = here.local
+    gradient = channel_gradient(local.rates, local.coupling, local.solution, kept)
+    return float(local.solution.flow[kept]), 0.0, gradient
+
+
+def _line(
+    history: FrozenHistory, here: Linearized, upper: int, lower: int
+) -> tuple[float, float, FlowGradient]:
+    """Flow between two kept levels in their line alone."""
+    ladder, local, scales = history.integrated.ladder, here.local, history.equations.scales
+    temperature_k = local.conditions.radiation_temperature_k / scales.energy
+    lines = kept_line_rates(ladder, upper, temperature_k)
+    at = int(np.flatnonzero(lines.position == ladder.kept_position[lower])[0])
+    down, up = (scales.line_rate * math.exp(rate[at]) for rate in (lines.log_out, lines.log_in))
+    d = local.solution.departure
+    kept = ladder.kept
+    exponent = float(kept.energy_ev[upper] - kept.energy_ev[lower])
+    exponent /= BOLTZMANN_EV_K * temperature_k
+    stimulated = exponent / math.expm1(exponent)
+    slope = down * d[upper] * stimulated - up * d[lower] * (stimulated + exponent)
+    gradient = line_gradient(local.rates, local.solution, upper, lower, down, up)
+    return float(down * d[upper] - up * d[lower]), float(slope), gradient
+
+
+def _slopes(history: FrozenHistory, here: Linearized, gradient: FlowGradient) -> FlowSlopes:
+    local = here.local
+    kept = history.equations.reduced.kept
+    return flow_slopes(kept, local.rates, local.coupling, local.conditions, gradient)
+
+
+def _by_state(here: Linearized, slopes: FlowSlopes) -> FloatArray:
+    """Derivative of a flow by (u, v)."""
+    c = here.local.conditions
+    by_odds = c.ground_fraction * (slopes.ln_electron_fraction + slopes.ln_ionized_fraction)
+    by_odds -= c.ionized_fraction * slopes.ln_ground_fraction
+    return np.array([by_odds, slopes.ln_matter_temperature])
