@@ -69,6 +69,12 @@ class FlowGradient(NamedTuple):
     loss: FloatArray
 
 
+def less(gradient: FlowGradient, share: float, other: FlowGradient) -> FlowGradient:
+    """Gradient of a flow less `share` times that of another."""
+    parts = zip(gradient, other, strict=True)
+    return FlowGradient(*(one - share * two for one, two in parts))
+
+
 def net_flow_gradient(
     rates: ReducedRates, coupling: GroundCoupling, solution: KeptSolution
 ) -> FlowGradient:

@@ -200,6 +200,18 @@ def adjoint(solution: Collocated[Here], source: FloatArray) -> tuple[FloatArray,
     return weight, carried
 
 
+def stage_slopes() -> FloatArray:
+    """Slope of the cubic of a step of unit length at its stages, shape (3, 4).
+
+    Weights of the start and of the stages; each row sums to 0.
+    """
+    knots = np.concatenate([[0.0], NODES])
+    powers = np.vander(knots, increasing=True)
+    slopes = np.arange(4) * np.vander(NODES, 4, increasing=True) / NODES[:, None]
+    weights: FloatArray = np.linalg.solve(powers.T, slopes.T).T
+    return weights
+
+
 def interpolation(place: FloatArray) -> FloatArray:
     """Weights of the start and the stages of a step in its cubic, at fractions of the step.
 

@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 from collections.abc import Sequence
 from dataclasses import dataclass
+from typing import NamedTuple
 
 import numpy as np
 
@@ -20,30 +21,33 @@ from ..network.gradient import (
     FlowSlopes,
     channel_gradient,
     flow_slopes,
+    less,
     line_gradient,
 )
-from ..numerics.collocation import WEIGHTS, interpolation
+from ..numerics.collocation import WEIGHTS, interpolation, stage_slopes
 from .frozen import FrozenHistory
 from .targets import Target
 
 
 @dataclass(frozen=True, slots=True, eq=False)
-class LineFlow:
-    """Net flow in one line at every stage; arrays of shape (n_steps, 3).
+class LineStrength:
+    """Net transitions in one line, summed over the history; n_points = 3 n_steps stages.
+
+    The strength is the integral of flow/F over the change of x_HI, with F the net flow to the
+    ground state: near equilibrium the flows themselves hold the error of a stiff state times its
+    relaxation rate, their ratio does not.
 
     Attributes
     ----------
     scalar : int
-        Which scalar is its integral.
-    weight : ndarray, s
-        What a flow at a stage counts in the integral over time.
-    flow : ndarray, s^-1
-        Net transitions per hydrogen nucleus.
-    gradient : list of FlowGradient, length 3 n_steps
-        By the rates, those of the line itself held.
-    slopes : list of FlowSlopes, length 3 n_steps
-        By the conditions, those of the line's own rates held.
-    own_slope : ndarray, s^-1
+        Which scalar it is.
+    weight : ndarray, shape (n_points,), s
+        What a change of flow - (flow/F) F counts.
+    gradient : list of FlowGradient, length n_points
+        Of flow - (flow/F) F by the rates, those of the line itself held.
+    slopes : list of FlowSlopes, length n_points
+        Of the same by the conditions.
+    own_slope : ndarray, shape (n_points,), s^-1
         Derivative by ln T_r through the line's own rates.
     ends : tuple of int, or None
         Positions of upper and lower among the kept levels; None for a line to the ground state.
@@ -51,7 +55,6 @@ class LineFlow:
 
     scalar: int
     weight: FloatArray
-    flow: FloatArray
     gradient: list[FlowGradient]
     slopes: list[FlowSlopes]
     own_slope: FloatArray
@@ -77,7 +80,7 @@ class Scalars:
     value: FloatArray
     by_state: FloatArray
     by_parameter: FloatArray
-    lines: tuple[LineFlow, ...]
+    lines: tuple[LineStrength, ...]
 
 
 def scalars_of(history: FrozenHistory, targets: Sequence[Target]) -> Scalars:
@@ -154,28 +157,57 @@ def _cubic(history: FrozenHistory, points: FloatArray) -> tuple[IntArray, FloatA
     return step, interpolation(place)
 
 
-def _put_line(history: FrozenHistory, target: Target, k: int, made: Scalars) -> LineFlow:
-    """Time-integrated net transitions of one line per hydrogen nucleus."""
-    solution, kept = history.solution, list(history.equations.reduced.kept)
+def _put_line(history: FrozenHistory, target: Target, k: int, made: Scalars) -> LineStrength:
+    """Put one line strength; what it hangs on directly is returned."""
+    kept = list(history.equations.reduced.kept)
     upper = kept.index(target.upper)
     lower = None if target.lower == (1, 0) else kept.index(target.lower)
-    shape = solution.times.shape
-    flow, own_slope, weight = np.zeros(shape), np.zeros(shape), np.zeros(shape)
+    weight, own_slope = [], []
     gradients: list[FlowGradient] = []
     slopes: list[FlowSlopes] = []
-    for j, row in enumerate(solution.linear):
+    for j, row in enumerate(history.solution.linear):
+        # Loss of x_HI at the stages over the step, by the slope of the cubic of u.
+        gain, share = _gain(history, j), np.empty(3)
         for i, one in enumerate(row):
-            here = one.here
+            here, total = one.here, one.here.local.solution.net_flow
             found = _channel(here, upper) if lower is None else _line(history, here, upper, lower)
-            flow[j, i], own_slope[j, i], gradient = found
-            weight[j, i] = solution.steps[j] * WEIGHTS[i] / here.local.conditions.hubble_rate_per_s
-            gradients.append(gradient)
-            slopes.append(_slopes(history, here, gradient))
-            made.by_state[k, j, i] = weight[j, i] * _by_state(here, slopes[-1])
-    made.value[k] = (weight * flow).sum()
-    return LineFlow(
-        k, weight, flow, gradients, slopes, own_slope, None if lower is None else (upper, lower)
-    )
+            share[i] = found[0] / total
+            own_slope.append(found[1])
+            gradients.append(less(found[2], share[i], here.gradient))
+            slopes.append(_slopes(history, here, gradients[-1]))
+            weight.append(WEIGHTS[i] * gain.value[i] / total)
+            made.by_state[k, j, i] += weight[-1] * _by_state(here, slopes[-1])
+        made.value[k] += WEIGHTS @ (share * gain.value)
+        _put_gain(made.by_state[k, :, :, 0], j, WEIGHTS * share, gain)
+    ends = None if lower is None else (upper, lower)
+    return LineStrength(k, np.array(weight), gradients, slopes, np.array(own_slope), ends)
+
+
+class _Gain(NamedTuple):
+    """Growth of x_HI over one step at its stages, times its length, and its slopes."""
+
+    value: FloatArray  # (3,)
+    by_knot: FloatArray  # (3, 4): by u at the start and at the stages
+
+
+def _gain(history: FrozenHistory, step: int) -> _Gain:
+    solution = history.solution
+    knots = np.append(solution.state_at(step)[0], solution.stages[step, :, 0])
+    pairs = np.array([ionized_and_neutral(u) for u in knots[1:].tolist()])
+    product = pairs.prod(axis=1)
+    slopes = stage_slopes()
+    value = -(slopes @ knots) * product
+    by_knot = -slopes * product[:, None]
+    by_knot[:, 1:] += np.diag(value * (pairs[:, 1] - pairs[:, 0]))
+    return _Gain(value, by_knot)
+
+
+def _put_gain(by_odds: FloatArray, step: int, weight: FloatArray, gain: _Gain) -> None:
+    """Add what a sum over the gains at the stages hangs on: `by_odds` has shape (n_steps, 3)."""
+    moved = weight @ gain.by_knot
+    by_odds[step] += moved[1:]
+    if step:
+        by_odds[step - 1, 2] += moved[0]
 
 
 def _channel(here: Linearized, kept: int) -> tuple[float, float, FlowGradient]:

@@ -16,7 +16,7 @@ from ..history.equations import Linearized
 from ..network.gradient import FlowGradient, FlowSlopes
 from ..network.reduction import WARM_K, beyond_doubles, exchange_pairs
 from .frozen import FrozenHistory
-from .scalars import LineFlow
+from .scalars import LineStrength
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -82,13 +82,11 @@ def channel_derivatives(here: Linearized, gradient: FlowGradient) -> FloatArray:
     return derivatives
 
 
-def line_parameters(history: FrozenHistory, line: LineFlow) -> FloatArray:
+def line_parameters(history: FrozenHistory, line: LineStrength) -> FloatArray:
     """Derivative of a line's strength by each parameter at fixed states, shape (6,)."""
-    weight, flow = line.weight.ravel(), line.flow.ravel()
-    own = line.own_slope.ravel()
-    slopes = [_by_background(s, o) for s, o in zip(line.slopes, own.tolist(), strict=True)]
-    by_point = _by_parameter(history, np.array(slopes)) - flow[:, None] * _hubble(history)
-    summed: FloatArray = weight @ by_point
+    own = line.own_slope.tolist()
+    slopes = [_by_background(s, o) for s, o in zip(line.slopes, own, strict=True)]
+    summed: FloatArray = line.weight @ _by_parameter(history, np.array(slopes))
     return summed
 
 

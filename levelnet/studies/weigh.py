@@ -169,7 +169,7 @@ def _direct(history: FrozenHistory, scalars: Scalars, weight: FloatArray) -> _Di
                 for one, g in zip(stages(history), line.gradient, strict=True)
             ]
         )
-        own = line.weight.ravel() @ channels
+        own = line.weight @ channels
         made.two_photon[line.scalar] += own[0]
         made.escape[line.scalar] += own[history.equations.lines.upper]
         made.parameter[line.scalar] += line_parameters(history, line)
@@ -185,9 +185,10 @@ def _by_rates(
     sources = [node_results(history, weight * scale, [one.gradient for one in here])]
     for line in scalars.lines:
         own = np.zeros_like(weight)
-        own[line.scalar] = line.weight.ravel()
+        own[line.scalar] = line.weight
         sources.append(node_results(history, own, line.gradient))
-    summed = NodeResults(sources[0].temperature_k, sum(s.by_result for s in sources))
+    by_result = np.sum([source.by_result for source in sources], axis=0)
+    summed = NodeResults(sources[0].temperature_k, by_result)
     ladder = history.integrated.ladder
     total = NodeWeights(
         np.zeros((len(weight), len(ladder.dipole.strength_per_s))),
