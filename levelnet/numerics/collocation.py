@@ -210,25 +210,3 @@ def stage_slopes() -> FloatArray:
     slopes = np.arange(4) * np.vander(NODES, 4, increasing=True) / NODES[:, None]
     weights: FloatArray = np.linalg.solve(powers.T, slopes.T).T
     return weights
-
-
-def interpolation(place: FloatArray) -> FloatArray:
-    """Weights of the start and the stages of a step in its cubic, at fractions of the step.
-
-    Parameters
-    ----------
-    place : ndarray, shape (n_points,)
-        Fractions, 0 to 1.
-
-    Returns
-    -------
-    ndarray, shape (n_points, 4)
-        The start first, then the three stages; each row sums to 1.
-    """
-    knots = np.concatenate([[0.0], NODES])
-    weights = np.ones((len(place), 4))
-    for k in range(4):
-        for other in range(4):
-            if other != k:
-                weights[:, k] *= (place - knots[other]) / (knots[k] - knots[other])
-    return weights

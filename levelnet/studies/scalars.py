@@ -8,8 +8,9 @@ from dataclasses import dataclass
 from typing import NamedTuple
 
 import numpy as np
+from scipy.interpolate import make_interp_spline
 
-from ..arrays import FloatArray, IntArray
+from ..arrays import FloatArray
 from ..background.last_scattering import OBSERVABLES, Observed, observe
 from ..background.parameters import COSMOLOGICAL
 from ..background.quadrature import quadrature
@@ -24,7 +25,7 @@ from ..network.gradient import (
     less,
     line_gradient,
 )
-from ..numerics.collocation import WEIGHTS, interpolation, stage_slopes
+from ..numerics.collocation import WEIGHTS, stage_slopes
 from .frozen import FrozenHistory
 from .targets import Target
 
@@ -126,10 +127,10 @@ def _put_observables(history: FrozenHistory, targets: Sequence[Target], made: Sc
         return
     solution, cosmology = history.solution, history.setup.cosmology
     grid = quadrature(cosmology, float(solution.edges[0]), float(solution.edges[-1]))
-    step, weight = _cubic(history, grid.points)
-    before = np.array([solution.state_at(k)[0] for k in range(len(solution.edges) - 1)])
-    knots = np.concatenate([before[:, None], solution.stages[:, :, 0]], axis=1)
-    log_odds = (weight * knots[step]).sum(axis=1)
+    log_odds_at_edges = np.append(solution.start[0], solution.stages[:, 2, 0])
+    # A quintic spline is linear in the values at the edges and smooth enough for slopes of g.
+    spread = make_interp_spline(solution.edges, np.eye(len(solution.edges)), k=5)(grid.points)
+    log_odds = spread @ log_odds_at_edges
     pairs = np.array([ionized_and_neutral(u) for u in log_odds.tolist()])
     seen: Observed = observe(
         cosmology,
@@ -142,19 +143,9 @@ def _put_observables(history: FrozenHistory, targets: Sequence[Target], made: Sc
     for row, k in enumerate((*wanted, *depths)):
         made.value[k] = seen.value[row]
         made.by_parameter[k] = seen.by_parameter[row]
-        # d ln x_e = x_HI du; the start of a step is the last stage of the one before.
-        moved = (seen.gradient[row] * pairs[:, 1])[:, None] * weight
-        np.add.at(made.by_state[k, :, :, 0], step, moved[:, 1:])
-        inner = step > 0
-        np.add.at(made.by_state[k, :, 2, 0], step[inner] - 1, moved[inner, 0])
-
-
-def _cubic(history: FrozenHistory, points: FloatArray) -> tuple[IntArray, FloatArray]:
-    """Step of each point (in ln a), and weights of its start and stages, shape (n_points, 4)."""
-    edges = history.solution.edges
-    step = np.clip(np.searchsorted(edges, points, side="right") - 1, 0, len(edges) - 2)
-    place = (points - edges[step]) / np.diff(edges)[step]
-    return step, interpolation(place)
+        # d ln x_e = x_HI du
+        moved = (seen.gradient[row] * pairs[:, 1]) @ spread
+        made.by_state[k, :, 2, 0] += moved[1:]
 
 
 def _put_line(history: FrozenHistory, target: Target, k: int, made: Scalars) -> LineStrength:

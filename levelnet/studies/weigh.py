@@ -39,7 +39,8 @@ from .sensitivity import (
 from .targets import Target, parse_target
 from .weighing import Weighing
 
-# Observables integrate x_e from where hydrogen is ionized to 1e-8; there the integration starts.
+# Observables and line strengths are integrals from where hydrogen is ionized to 1e-6 of itself;
+# there the integration starts for them.
 _IONIZED_K = 7000.0
 
 
@@ -103,7 +104,7 @@ def weigh(
         raise InputError("targets: name at least one, such as x_e(900)")
     check_memory(setup)
     with one_blas_thread():
-        history = freeze(setup, *_reach(setup, parsed), tell, pieces)
+        history = freeze(setup, *reach(setup, parsed), tell, pieces)
         scalars = scalars_of(history, parsed)
         for target, value in zip(parsed, scalars.value.tolist(), strict=True):
             if not np.isfinite(value) or value == 0.0:
@@ -111,13 +112,13 @@ def weigh(
         return _assemble(history, parsed, scalars, tell)
 
 
-def _reach(
+def reach(
     setup: Setup, targets: Sequence[Target]
 ) -> tuple[list[float], tuple[tuple[int, int], ...], float]:
     """Redshifts that must be step ends, levels that must be kept, where to start at the latest."""
     redshifts = [t.redshift for t in targets if t.kind in {"x_e", "T_m"}]
     keeps = {level for t in targets if t.kind == "line" for level in (t.upper, t.lower)}
-    integral = any(t.kind in {"observable", "optical_depth"} for t in targets)
+    integral = any(t.kind not in {"x_e", "T_m"} for t in targets)
     ionized = _IONIZED_K / setup.cosmology.cmb_temperature_k - 1.0
     return redshifts, tuple(sorted(keeps - {(1, 0)})), ionized if integral else 0.0
 
