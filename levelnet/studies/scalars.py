@@ -220,7 +220,8 @@ def _line(
     kept = ladder.kept
     exponent = float(kept.energy_ev[upper] - kept.energy_ev[lower])
     exponent /= BOLTZMANN_EV_K * temperature_k
-    stimulated = exponent / math.expm1(exponent)
+    # d ln(1 + f)/d ln T = x f, f the occupation number; e^-x first, for x may be large.
+    stimulated = exponent * math.exp(-exponent) / -math.expm1(-exponent)
     slope = down * d[upper] * stimulated - up * d[lower] * (stimulated + exponent)
     gradient = line_gradient(local.rates, local.solution, upper, lower, down, up)
     return float(down * d[upper] - up * d[lower]), float(slope), gradient

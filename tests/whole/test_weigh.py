@@ -24,9 +24,9 @@ from tests.frozen_differences import (
 )
 from tests.small_runs import small_setup
 
-# Differences of ln J carry the rounding of J, 1e-13, over the step; line strengths hold more of it,
-# for they sum flows that near equilibrium are small differences.
-NOISE = {name: 1e-10 if name.startswith("line") else 2e-11 for name in TARGETS}
+# Differences of ln J carry the rounding of J, 1e-13, over the step of 0.02; line strengths hold more
+# of it, for they sum flows that near equilibrium are small differences.
+NOISE = {name: 2e-8 if name.startswith("line") else 1e-11 for name in TARGETS}
 NOISE["line(3d-2p)"] = 1e-6
 
 
@@ -37,7 +37,7 @@ def weighing(n_max: int = 8, end: float = 20.0) -> Weighing:
 
 def compare(computed: Any, difference: Any, what: object) -> None:
     for name, ours, theirs in zip(TARGETS, computed, difference, strict=True):
-        assert ours == pytest.approx(theirs, rel=1e-6, abs=10.0 * NOISE[name]), (what, name)
+        assert ours == pytest.approx(theirs, rel=1e-6, abs=NOISE[name]), (what, name)
 
 
 def line_slope(place: Any, n_max: int = 8, end: float = 20.0) -> Any:
@@ -100,7 +100,7 @@ def test_parameters(name: str) -> None:
 
 def strong(ours: Weighing, least: float) -> np.ndarray:
     plain = [k for k, name in enumerate(TARGETS) if not name.startswith("line")]
-    return np.flatnonzero(np.abs(ours.bound_bound[plain]).min(axis=0) > least)
+    return np.flatnonzero(np.abs(ours.bound_bound[plain]).max(axis=0) > least)
 
 
 def test_a_few_lines_and_levels() -> None:
@@ -144,4 +144,4 @@ def test_forty_rates_and_groups_of_the_rest(end: float) -> None:
         difference = line_slope(found.place[group], 10, end)
         computed = ours.bound_bound[:, group].sum(axis=1)
         for at, name in enumerate(TARGETS):
-            assert computed[at] == pytest.approx(difference[at], rel=1e-6, abs=10 * NOISE[name])
+            assert computed[at] == pytest.approx(difference[at], rel=1e-6, abs=NOISE[name])
