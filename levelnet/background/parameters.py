@@ -37,6 +37,14 @@ def hydrogen_derivatives(cosmology: Cosmology) -> FloatArray:
     return result
 
 
+def helium_derivatives(cosmology: Cosmology) -> FloatArray:
+    """Df_He by each of `COSMOLOGICAL`, shape (6,)."""
+    result = np.zeros(len(COSMOLOGICAL))
+    left = 1.0 - helium_mass_fraction(cosmology)
+    result[4] = 1.0 / (const.HELIUM_HYDROGEN_MASS_RATIO * left**2)
+    return result
+
+
 def baryon_loading(cosmology: Cosmology) -> float:
     """R = 3 rho_b/(4 rho_gamma) today (dimensionless); it falls as 1/(1 + z)."""
     photons = photon_density_h2(cosmology.cmb_temperature_k)

@@ -28,8 +28,9 @@ from ..background.matter import compton_rate_per_s
 from ..escape.treatment import LineTreatment, ResonanceLines
 from ..escape.two_photon import with_two_photon
 from ..network.coupling import GroundCoupling, with_line_factors
+from ..network.gradient import FlowGradient, FlowSlopes, flow_slopes, net_flow_gradient
 from ..network.reduced import Reduced, ReducedRates
-from ..network.solve import FlowSlopes, KeptSolution, flow_slopes, solve_kept
+from ..network.solve import KeptSolution, solve_kept
 
 
 class Background(NamedTuple):
@@ -60,6 +61,33 @@ class Local(NamedTuple):
     rates: ReducedRates
     coupling: GroundCoupling
     solution: KeptSolution
+
+
+class Linearized(NamedTuple):
+    """The equations at one time and state, to first order.
+
+    Attributes
+    ----------
+    local : Local
+        Everything there.
+    rate : ndarray, shape (2,)
+        (du/ds, dv/ds).
+    matrix : ndarray, shape (2, 2)
+        Derivatives of the rates by the state.
+    drift : ndarray, shape (2,)
+        By s.
+    gradient : FlowGradient
+        Of the net flow to the ground state by the rates.
+    slopes : FlowSlopes
+        Of it by the conditions.
+    """
+
+    local: Local
+    rate: FloatArray
+    matrix: FloatArray
+    drift: FloatArray
+    gradient: FlowGradient
+    slopes: FlowSlopes
 
 
 def ionized_and_neutral(log_odds: float) -> tuple[float, float]:
@@ -150,7 +178,9 @@ class SlowEquations:
 
     def rate(self, log_scale: float, state: FloatArray) -> FloatArray:
         """(du/ds, dv/ds)."""
-        here = self.local(log_scale, state)
+        return self._rate_of(self.local(log_scale, state), state)
+
+    def _rate_of(self, here: Local, state: FloatArray) -> FloatArray:
         c = here.conditions
         return np.array(
             [
@@ -162,9 +192,17 @@ class SlowEquations:
 
     def jacobian(self, log_scale: float, state: FloatArray) -> tuple[FloatArray, FloatArray]:
         """Derivatives of the rates by the state, shape (2, 2), and by s, shape (2,)."""
+        here = self.linearized(log_scale, state)
+        return here.matrix, here.drift
+
+    def linearized(self, log_scale: float, state: FloatArray) -> Linearized:
+        """Rates, their slopes, and what the net flow hangs on, at one time and state."""
         here = self.local(log_scale, state)
+        gradient = net_flow_gradient(here.rates, here.coupling, here.solution)
+        slopes = flow_slopes(
+            self.reduced.kept, here.rates, here.coupling, here.conditions, gradient
+        )
         c, flow = here.conditions, here.solution.net_flow
-        slopes = flow_slopes(self.reduced.kept, here.rates, here.coupling, c, here.solution)
         hubble_slope = self.background(log_scale).hubble_slope
         scale = -1.0 / (c.hubble_rate_per_s * c.ionized_fraction * c.ground_fraction)
         by_odds, by_time = self._flow_derivatives(slopes, c, flow, hubble_slope)
@@ -179,7 +217,7 @@ class SlowEquations:
             ]
         )
         drift = np.array([scale * by_time, cooling * (-4.0 - hubble_slope)])
-        return matrix, drift
+        return Linearized(here, self._rate_of(here, state), matrix, drift, gradient, slopes)
 
     def _flow_derivatives(
         self, slopes: FlowSlopes, c: Conditions, flow: float, hubble_slope: float

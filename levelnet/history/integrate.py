@@ -67,12 +67,27 @@ def integrate_history(
     tell: Progress,
     pieces: Pieces | None = None,
     line_treatment: LineTreatment | None = None,
+    *,
+    keeps: tuple[tuple[int, int], ...] = (),
+    start_above: float = 0.0,
 ) -> Integrated:
-    """Integrate the slow variables of one run; see :func:`solve` for the arguments."""
+    """Integrate the slow variables of one run.
+
+    Parameters
+    ----------
+    setup, tell, pieces, line_treatment
+        As for :func:`levelnet.solve`.
+    keeps : tuple of (n, l)
+        Levels to keep from elimination besides those that the lines need.
+    start_above : float, dimensionless
+        A redshift above which the integration must start, though Saha equilibrium ends lower.
+    """
     tell("atomic data", 0.0)
     chosen = line_treatment or member(setup.lines.hydrogen)
     handover = setup_handover(setup, chosen)
-    ladder = build_ladder(setup, keeps=chosen.keeps)
+    if start_above > handover.redshift:
+        handover = Handover(start_above, handover.departure)
+    ladder = build_ladder(setup, keeps=(*chosen.keeps, *keeps))
     redshift = output_redshifts(setup)
     factor = scales(setup.physics)
     reduced: Reduced = live_reduction(ladder)

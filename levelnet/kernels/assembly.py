@@ -39,6 +39,69 @@ def _fill(
 
 
 @kernel
+def geometric_means(
+    n_max: int,
+    first_n: IntArray,
+    strength: FloatArray,
+    strength_start: IntArray,
+    geometric: FloatArray,
+    stretch: FloatArray,
+    start: IntArray,
+    coupling_start: IntArray,
+    root_weight: FloatArray,
+    shift: FloatArray,
+    live: FloatArray,
+    upward: FloatArray,
+    downward: FloatArray,
+    coupling: FloatArray,
+) -> None:
+    """Geometric mean S of the two directions of every line, and what it sums to.
+
+    Arguments as for :func:`symmetric_blocks`; on exit `coupling` holds S, `upward` and `downward`
+    the sums of S times the root weight of the partners in the block above and below.
+    """
+    n_blocks = first_n.shape[0]
+    upward[:] = 0.0
+    downward[:] = 0.0
+    relative, lean = np.empty(n_max + 1), np.empty(n_max + 1)
+    half = np.exp(-0.5 * shift)
+    whole = 1.0 / half
+    for l in range(n_blocks - 1):
+        low, columns = first_n[l + 1], n_max - l - 1
+        above = n_max + 1 - low
+        first = start[l + 1]
+        for n in range(first_n[l], n_max + 1):
+            i = start[l] + n - first_n[l]
+            row = strength_start[l] + (n - l - 1) * columns + low - l - 2
+            begin = coupling_start[l] + (n - first_n[l]) * above
+            for j in range(above):
+                relative[j] = shift[i] - shift[first + j]
+            middle = min(max(n - low, 0), above)
+            for j in range(middle):
+                lean[j] = half[i] * whole[first + j]
+            for j in range(middle, above):
+                lean[j] = whole[i] * half[first + j]
+            for a, b, rise in ((0, middle, 1.0), (middle, above, -1.0)):
+                _fill(
+                    strength[row + a : row + b],
+                    geometric[n, low + a : low + b],
+                    stretch[n, low + a : low + b],
+                    rise,
+                    relative[a:b],
+                    lean[a:b],
+                    live[first + a : first + b],
+                    root_weight[i] * live[i],
+                    downward[first + a : first + b],
+                    coupling[begin + a : begin + b],
+                )
+            total = 0.0
+            for j in range(above):
+                coupling[begin + j] *= live[i]
+                total += coupling[begin + j] * root_weight[first + j]
+            upward[i] = total
+
+
+@kernel
 def symmetric_blocks(
     n_max: int,
     first_n: IntArray,
@@ -85,44 +148,22 @@ def symmetric_blocks(
         B = S / sqrt(D D'), S the geometric mean of the two directions of each line.
     """
     n_blocks = first_n.shape[0]
-    upward[:] = 0.0
-    downward[:] = 0.0
-    relative, lean = np.empty(n_max + 1), np.empty(n_max + 1)
-    half = np.exp(-0.5 * shift)
-    whole = 1.0 / half
-    for l in range(n_blocks - 1):
-        low, columns = first_n[l + 1], n_max - l - 1
-        above = n_max + 1 - low
-        first = start[l + 1]
-        for n in range(first_n[l], n_max + 1):
-            i = start[l] + n - first_n[l]
-            row = strength_start[l] + (n - l - 1) * columns + low - l - 2
-            begin = coupling_start[l] + (n - first_n[l]) * above
-            for j in range(above):
-                relative[j] = shift[i] - shift[first + j]
-            middle = min(max(n - low, 0), above)
-            for j in range(middle):
-                lean[j] = half[i] * whole[first + j]
-            for j in range(middle, above):
-                lean[j] = whole[i] * half[first + j]
-            for a, b, rise in ((0, middle, 1.0), (middle, above, -1.0)):
-                _fill(
-                    strength[row + a : row + b],
-                    geometric[n, low + a : low + b],
-                    stretch[n, low + a : low + b],
-                    rise,
-                    relative[a:b],
-                    lean[a:b],
-                    live[first + a : first + b],
-                    root_weight[i] * live[i],
-                    downward[first + a : first + b],
-                    coupling[begin + a : begin + b],
-                )
-            total = 0.0
-            for j in range(above):
-                coupling[begin + j] *= live[i]
-                total += coupling[begin + j] * root_weight[first + j]
-            upward[i] = total
+    geometric_means(
+        n_max,
+        first_n,
+        strength,
+        strength_start,
+        geometric,
+        stretch,
+        start,
+        coupling_start,
+        root_weight,
+        shift,
+        live,
+        upward,
+        downward,
+        coupling,
+    )
     for i in range(diagonal.shape[0]):
         diagonal[i] = (upward[i] + downward[i]) / root_weight[i] + sink[i]
         upward[i] = 1.0 / math.sqrt(diagonal[i])
@@ -172,3 +213,49 @@ def shell_means(
             a = stretch[shell_n[s], n[i]] * (own - shift[i])
             mean = strength[s, position[i]] * geometric[shell_n[s], n[i]] * lean * root[i]
             out[s, i] = mean * ((2.0 - a) / (2.0 + a))
+
+
+@kernel
+def pair_weights(
+    n_max: int,
+    first_n: IntArray,
+    strength_start: IntArray,
+    start: IntArray,
+    coupling_start: IntArray,
+    root_weight: FloatArray,
+    coupling: FloatArray,
+    feed: FloatArray,
+    fate: FloatArray,
+    out: FloatArray,
+) -> None:
+    """Add net flow times difference of fates to every line, summed over the kept levels.
+
+    Parameters
+    ----------
+    n_max, first_n, strength_start, start, coupling_start, root_weight
+        As for :func:`symmetric_blocks`.
+    coupling : ndarray
+        S, from :func:`geometric_means`: R_ij w_i = R_ji w_j = S times both root weights.
+    feed : ndarray, shape (n_sets, n_kept, n_unknowns)
+        Populations over their weights, x / w, of each set.
+    fate : ndarray, shape (n_kept, n_unknowns)
+        Chance to reach each kept level first.
+    out : ndarray, shape (n_sets, n_strengths)
+        Added to, in the order of `strength`: (R_ij x_i - R_ji x_j) (fate_j - fate_i).
+    """
+    n_sets, n_kept = feed.shape[0], feed.shape[1]
+    for l in range(first_n.shape[0] - 1):
+        low, columns = first_n[l + 1], n_max - l - 1
+        above = n_max + 1 - low
+        first = start[l + 1]
+        for n in range(first_n[l], n_max + 1):
+            i = start[l] + n - first_n[l]
+            row = strength_start[l] + (n - l - 1) * columns + low - l - 2
+            begin = coupling_start[l] + (n - first_n[l]) * above
+            for s in range(n_sets):
+                for k in range(n_kept):
+                    own_feed, own_fate = feed[s, k, i], fate[k, i]
+                    for j in range(above):
+                        flow = coupling[begin + j] * root_weight[i] * root_weight[first + j]
+                        flow *= own_feed - feed[s, k, first + j]
+                        out[s, row + j] += flow * (fate[k, first + j] - own_fate)

@@ -374,7 +374,7 @@ def _depart(room: Room) -> None:
 
 @kernel
 def _differentiate(atom: Atom, inverse: float, room: Room) -> None:
-    """Derivatives of the net flow, as `flow_slopes` in levelnet/network/solve.py, and more."""
+    """Derivatives of the net flow, as `flow_slopes` in levelnet/network/gradient.py, and more."""
     vector, rate, rate_slope, slope = room.vector, room.matrix[0], room.matrix[1], room.slope
     n = vector.shape[1]
     two_photon = slope[-1]

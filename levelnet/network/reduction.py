@@ -117,8 +117,8 @@ def reduce_at(
     factored = factor_interior(ladder, radiation_temperature_k, workspace)
     fates = all_fates(factored)
     return Node(
-        _log_exchange(factored, pairs, fates),
-        _log_spectrum(ladder, radiation_temperature_k, fates),
+        log_exchange(factored, pairs, fates),
+        log_spectrum(ladder, radiation_temperature_k, fates),
     )
 
 
@@ -132,7 +132,8 @@ def all_fates(factored: FactoredInterior) -> FloatArray:
     return fates
 
 
-def _log_exchange(factored: FactoredInterior, pairs: Pairs, fates: FloatArray) -> FloatArray:
+def log_exchange(factored: FactoredInterior, pairs: Pairs, fates: FloatArray) -> FloatArray:
+    """Ln of the downward exchange of each pair times exp(barrier / kT_r), shape (n_pairs,)."""
     ladder = factored.ladder
     kt = const.BOLTZMANN_EV_K * factored.radiation_temperature_k
     through = fates.copy()
@@ -159,7 +160,8 @@ def beyond_doubles(pairs: Pairs, coldest_k: float) -> BoolArray:
     return found & (coldest_k < WARM_K)
 
 
-def _log_spectrum(ladder: Ladder, temperature_k: float, fates: FloatArray) -> FloatArray:
+def log_spectrum(ladder: Ladder, temperature_k: float, fates: FloatArray) -> FloatArray:
+    """Ln of the spectral capture into each kept level, shape (n_kept, n_energies)."""
     weights = recombination_weights(ladder.bound_free, temperature_k)
     weighted = fates * (0.5 * ladder.levels.statistical_weight)
     spectrum = np.zeros((len(ladder.kept), weights.shape[1]))

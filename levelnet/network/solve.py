@@ -1,4 +1,4 @@
-"""The kept levels in the quasi-steady state: populations, flow to the ground state, slopes.
+"""The kept levels in the quasi-steady state: populations and flow to the ground state.
 
 With x_B the Boltzmann populations over the ground state at T_r and x = x_B + d, the balance of the
 kept levels reads
@@ -14,7 +14,6 @@ flows.
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import NamedTuple
 
 import numpy as np
 from scipy.linalg import lapack
@@ -25,18 +24,6 @@ from ..background.conditions import Conditions
 from ..errors import Outcome, SolveError
 from .coupling import GroundCoupling
 from .reduced import KeptLevels, ReducedRates
-
-
-class FlowSlopes(NamedTuple):
-    """Derivatives of the net flow to the ground state, s^-1 per unit of the logarithm named."""
-
-    ln_radiation_temperature: float
-    ln_matter_temperature: float
-    ln_hydrogen_density: float
-    ln_hubble_rate: float
-    ln_electron_fraction: float
-    ln_ionized_fraction: float
-    ln_ground_fraction: float
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -55,6 +42,8 @@ class KeptSolution:
         A_i n_H x_e x_p.
     lift : ndarray, shape (n_kept,), s^-1
         B_i x_B,i.
+    recombination : ndarray, shape (n_kept,), s^-1
+        r_i, their difference.
     matrix : ndarray, shape (n_kept, n_kept), s^-1
         M + K.
     """
@@ -64,6 +53,7 @@ class KeptSolution:
     flow: FloatArray
     capture: FloatArray
     lift: FloatArray
+    recombination: FloatArray
     matrix: FloatArray
 
     @property
@@ -139,53 +129,6 @@ def solve_kept(
     if status:
         raise SolveError(Outcome.SINGULAR.value)
     flow = coupling.loss @ departure - coupling.excess_source
-    return KeptSolution(log_boltzmann, departure, flow, capture, np.exp(log_lift), matrix)
-
-
-def flow_slopes(
-    kept: KeptLevels,
-    rates: ReducedRates,
-    coupling: GroundCoupling,
-    conditions: Conditions,
-    solution: KeptSolution,
-) -> FlowSlopes:
-    """Derivatives of the net flow, by one transposed solve.
-
-    With the fates y = (M + K)^-T K^T 1 (the chance that an atom put into a kept level ends in the
-    ground state) and z = 1 - y = (M + K)^-T B (that it is ionized again first),
-    dF = z.(dK d) + y.(dr - dM d). Both are solved for, so that neither is a difference. Slopes of
-    `excess_source` are not included: a treatment with a distorted field is stepped with them
-    lagging.
-    """
-    d = solution.departure
-    photo = np.exp(rates.log_photoionization)
-    ends = np.stack([coupling.loss.sum(axis=0), photo], axis=1)
-    # Exits differ by hundreds of decades; scaled to 1, pivoting does not lose the slow ones.
-    exits = np.diagonal(solution.matrix)[:, None]
-    fate, ionized_again = lapack.dgesv(solution.matrix.T / exits, ends / exits)[2].T
-    kt = const.BOLTZMANN_EV_K * conditions.radiation_temperature_k
-    capture, lift = fate * solution.capture, fate * solution.lift
-    by_column = float(ionized_again @ (coupling.slope_column @ d))
-    gain = np.where(
-        np.add.outer(fate, fate) < 1.0,
-        np.subtract.outer(fate, fate),
-        -np.subtract.outer(ionized_again, ionized_again),
-    )
-    spread = rates.exchange * rates.exchange_slope * d[:, None] * gain
-    by_radiation = (
-        capture @ rates.recombination_slope_radiation
-        - lift @ (rates.photoionization_slope + kept.energy_ev / kt)
-        - fate @ (photo * rates.photoionization_slope * d)
-        - spread.sum()
-        + ionized_again @ (coupling.slope_temperature @ d)
-    )
-    captured = float(capture.sum())
-    return FlowSlopes(
-        float(by_radiation),
-        float(capture @ rates.recombination_slope_matter),
-        captured + by_column,
-        -by_column,
-        captured,
-        captured,
-        by_column - float(lift.sum()),
+    return KeptSolution(
+        log_boltzmann, departure, flow, capture, np.exp(log_lift), recombination, matrix
     )

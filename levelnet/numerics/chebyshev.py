@@ -5,7 +5,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
-from scipy.fft import dct
+from scipy.fft import dct, idct
 
 from ..arrays import FloatArray
 from ..errors import RangeError
@@ -39,6 +39,40 @@ class ChebyshevSeries:
         coefficients = dct(values[::-1], type=2, axis=0) / len(values)
         coefficients[0] *= 0.5
         return ChebyshevSeries(low, high, coefficients)
+
+    @property
+    def nodes(self) -> FloatArray:
+        """Where the values were given, shape (n_nodes,)."""
+        return chebyshev_nodes(self.low, self.high, len(self.coefficients))
+
+    @property
+    def values_at_nodes(self) -> FloatArray:
+        """The values there, shape (n_nodes, n_functions)."""
+        count = len(self.coefficients)
+        scaled = self.coefficients * count
+        scaled[0] *= 2.0
+        values: FloatArray = idct(scaled, type=2, axis=0)[::-1]
+        return values
+
+    def node_weights(self, x: FloatArray) -> FloatArray:
+        """Weight of the value at each node in the interpolated value at each `x` inside.
+
+        Parameters
+        ----------
+        x : ndarray, shape (n_points,)
+            Places between `low` and `high`.
+
+        Returns
+        -------
+        ndarray, shape (n_points, n_nodes)
+            Each row sums to 1.
+        """
+        middle, half = 0.5 * (self.low + self.high), 0.5 * (self.high - self.low)
+        angle = np.arccos(np.clip((x - middle) / half, -1.0, 1.0))
+        order = np.arange(len(self.coefficients))
+        unit = ChebyshevSeries.fit(self.low, self.high, np.eye(len(order))).coefficients
+        weights: FloatArray = np.cos(angle[:, None] * order) @ unit
+        return weights
 
     def evaluate(self, x: float) -> tuple[FloatArray, FloatArray]:
         """Values and derivatives at `x`, each of shape (n_functions,); RangeError outside."""

@@ -103,3 +103,16 @@ def test_not_a_number_is_outside() -> None:
     series, _ = fitted(6, 1, 0)
     with pytest.raises(RangeError):
         series.evaluate(float("nan"))
+
+
+def test_weights_of_the_node_values() -> None:
+    draw = np.random.default_rng(5)
+    values = draw.normal(size=(9, 3))
+    series = ChebyshevSeries.fit(-1.0, 2.5, values)
+    np.testing.assert_allclose(series.values_at_nodes, values, rtol=1e-13, atol=1e-13)
+    np.testing.assert_array_equal(series.nodes, chebyshev_nodes(-1.0, 2.5, 9))
+    places = np.array([-1.0, 0.3, 2.5])
+    expected = [series.evaluate(x)[0] for x in places.tolist()]
+    weights = series.node_weights(places)
+    np.testing.assert_allclose(weights @ values, expected, atol=1e-13)
+    np.testing.assert_allclose(weights.sum(axis=1), 1.0, rtol=1e-13)

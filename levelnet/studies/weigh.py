@@ -1,0 +1,220 @@
+"""Which rates an answer hangs on: the derivative of scalars by every rate at once, by an adjoint.
+
+The history is solved once more by collocation on the steps that the integration chose. One sweep
+backwards over them gives weights that turn changes of the equations at each stage into changes of
+the scalar J; the reduced network enters through its values at the nodes in T_r, where each exact
+reduction is differentiated in turn. What comes out is the derivative of the history as computed,
+interpolation included.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from typing import NamedTuple
+
+import numpy as np
+
+from ..arrays import FloatArray
+from ..background.parameters import COSMOLOGICAL, helium_mass_fraction
+from ..errors import InputError, Outcome
+from ..history.cost import check_memory
+from ..history.integrate import Progress
+from ..history.setup import Setup
+from ..network.assembly import Workspace
+from ..network.reduction import exchange_pairs
+from ..network.weights import NodeWeights, add_node_weights, line_places, n_places, transitions
+from ..numerics.collocation import adjoint
+from ..numerics.threads import one_blas_thread
+from ..pieces import Pieces
+from .frozen import FrozenHistory, freeze
+from .scalars import Scalars, scalars_of
+from .sensitivity import (
+    NodeResults,
+    channel_derivatives,
+    line_parameters,
+    node_results,
+    stage_rates,
+    stages,
+)
+from .targets import Target, parse_target
+from .weighing import Weighing
+
+# Observables and line strengths are integrals from where hydrogen is ionized to 1e-6 of itself;
+# there the integration starts for them.
+_IONIZED_K = 7000.0
+
+
+class _Direct(NamedTuple):
+    """Derivatives dJ by what stands outside the reduced network; n_scalars along the first axis."""
+
+    two_photon: FloatArray
+    escape: FloatArray
+    compton: FloatArray
+    parameter: FloatArray
+
+
+def weigh(
+    setup: Setup,
+    targets: Sequence[str],
+    *,
+    progress: Progress | None = None,
+    pieces: Pieces | None = None,
+) -> Weighing:
+    """Weigh every rate of one history.
+
+    Parameters
+    ----------
+    setup : Setup
+        The history; its output redshifts do not matter, but its lowest one does (optical depths
+        start there).
+    targets : sequence of str
+        Scalars J: "x_e(900)", "T_m(100)", the observables of
+        :mod:`levelnet.background.last_scattering`, "optical_depth(200)", or "line(3d-2p)": net
+        transitions in a line per hydrogen nucleus, summed over the history.
+    progress : callable, optional
+        ``progress(stage, fraction)``.
+    pieces : Pieces, optional
+        Store of reduced networks, as for :func:`levelnet.solve`.
+
+    Returns
+    -------
+    Weighing
+        d ln J / d ln R for every rate R, and for the parameters of the cosmology.
+
+    Raises
+    ------
+    InputError
+        For an unknown target, or one the history does not reach.
+    SolveError
+        If the history did not converge.
+
+    Notes
+    -----
+    J is that of the collocated history; it differs from :func:`levelnet.solve` by no more than
+    ``setup.accuracy.relative``. Derivatives are exact to rounding for it, first order in the
+    change of a rate. The slow start in Saha equilibrium has no part in them.
+
+    References
+    ----------
+    Cacuci 1981, J. Math. Phys. 22, 2794 (adjoint sensitivities; from memory).
+    """
+    tell = progress or (lambda stage, fraction: None)
+    parsed = [parse_target(text) for text in targets]
+    if not parsed:
+        raise InputError("targets: name at least one, such as x_e(900)")
+    check_memory(setup)
+    with one_blas_thread():
+        history = freeze(setup, *reach(setup, parsed), tell, pieces)
+        scalars = scalars_of(history, parsed)
+        for target, value in zip(parsed, scalars.value.tolist(), strict=True):
+            if not np.isfinite(value) or value == 0.0:
+                raise InputError(f"target {target.name}: the history does not reach it")
+        return _assemble(history, parsed, scalars, tell)
+
+
+def reach(
+    setup: Setup, targets: Sequence[Target]
+) -> tuple[list[float], tuple[tuple[int, int], ...], float]:
+    """Redshifts that must be step ends, levels that must be kept, where to start at the latest."""
+    redshifts = [t.redshift for t in targets if t.kind in {"x_e", "T_m"}]
+    keeps = {level for t in targets if t.kind == "line" for level in (t.upper, t.lower)}
+    integral = any(t.kind not in {"x_e", "T_m"} for t in targets)
+    ionized = _IONIZED_K / setup.cosmology.cmb_temperature_k - 1.0
+    return redshifts, tuple(sorted(keeps - {(1, 0)})), ionized if integral else 0.0
+
+
+def _assemble(
+    history: FrozenHistory, targets: Sequence[Target], scalars: Scalars, tell: Progress
+) -> Weighing:
+    ladder = history.integrated.ladder
+    weight, _ = adjoint(history.solution, scalars.by_state)
+    flat = weight.reshape(len(targets), -1, 2)
+    direct = _direct(history, scalars, flat)
+    by_rate = _by_rates(history, scalars, flat[:, :, 0], tell)
+    found = transitions(ladder)
+    value = scalars.value
+    parameter = direct.parameter * _parameter_values(history) / value[:, None]
+    return Weighing(
+        history.setup,
+        Outcome.CONVERGED,
+        tuple(t.name for t in targets),
+        tuple(t.unit for t in targets),
+        value,
+        ladder.levels,
+        found.upper,
+        found.lower,
+        history.equations.lines.names,
+        COSMOLOGICAL,
+        by_rate.bound_bound[:, found.place] / value[:, None],
+        by_rate.bound_free / value[:, None],
+        direct.escape / value[:, None],
+        direct.two_photon / value,
+        direct.compton / value,
+        parameter,
+    )
+
+
+def _direct(history: FrozenHistory, scalars: Scalars, weight: FloatArray) -> _Direct:
+    rates = stage_rates(history)
+    by_u, by_v = weight[:, :, 0], weight[:, :, 1]
+    made = _Direct(
+        by_u @ rates.two_photon,
+        by_u @ rates.escape,
+        by_v @ rates.compton,
+        np.einsum("spx,pxq->sq", weight, rates.parameter) + scalars.by_parameter,
+    )
+    for line in scalars.lines:
+        channels = np.array(
+            [
+                channel_derivatives(one, g)
+                for one, g in zip(stages(history), line.gradient, strict=True)
+            ]
+        )
+        own = line.weight @ channels
+        made.two_photon[line.scalar] += own[0]
+        made.escape[line.scalar] += own[history.equations.lines.upper]
+        made.parameter[line.scalar] += line_parameters(history, line)
+    return made
+
+
+def _by_rates(
+    history: FrozenHistory, scalars: Scalars, weight: FloatArray, tell: Progress
+) -> NodeWeights:
+    """DJ by the ln of every line strength and cross section."""
+    here = stages(history)
+    scale = stage_rates(history).scale
+    sources = [node_results(history, weight * scale, [one.gradient for one in here])]
+    for line in scalars.lines:
+        own = np.zeros_like(weight)
+        own[line.scalar] = line.weight
+        sources.append(node_results(history, own, line.gradient))
+    by_result = np.sum([source.by_result for source in sources], axis=0)
+    summed = NodeResults(sources[0].temperature_k, by_result)
+    ladder = history.integrated.ladder
+    total = NodeWeights(
+        np.zeros((len(weight), n_places(ladder))),
+        np.zeros((len(weight), len(ladder.levels))),
+    )
+    pairs, work = exchange_pairs(ladder), Workspace.of(ladder)
+    for count, (temperature_k, by_result) in enumerate(zip(*_plain(summed), strict=True)):
+        if np.any(by_result):
+            add_node_weights(ladder, pairs, temperature_k, by_result, total, work)
+        tell("weighing rates", (count + 1) / len(summed.temperature_k))
+    for line in scalars.lines:
+        if line.ends is not None:
+            upper, lower = line.ends
+            place = line_places(ladder, upper, ladder.kept_position[[lower]])
+            total.bound_bound[line.scalar, place] += scalars.value[line.scalar]
+    return total
+
+
+def _plain(results: NodeResults) -> tuple[list[float], FloatArray]:
+    return results.temperature_k.tolist(), results.by_result
+
+
+def _parameter_values(history: FrozenHistory) -> FloatArray:
+    """Values of the parameters, shape (6,)."""
+    cosmology = history.setup.cosmology
+    values = {name: getattr(cosmology, name) for name in COSMOLOGICAL}
+    values["helium_mass_fraction"] = helium_mass_fraction(cosmology)
+    return np.array([values[name] for name in COSMOLOGICAL])

@@ -1,0 +1,147 @@
+"""Weighing against differences of the same history, and against published sensitivities."""
+
+from __future__ import annotations
+
+import dataclasses
+import math
+from functools import lru_cache
+from typing import Any
+
+import numpy as np
+import pytest
+
+from levelnet.network.weights import transitions
+from levelnet.studies.weigh import weigh
+from levelnet.studies.weighing import Weighing
+from tests.frozen_differences import (
+    TARGETS,
+    ScaledSobolev,
+    frozen_run,
+    log_scalars,
+    slope,
+    with_cross_sections,
+    with_strengths,
+)
+from tests.small_runs import small_setup
+
+# Differences of ln J carry the rounding of J, 1e-13, over the step of 0.02; line strengths hold
+# more of it, for they sum flows that near equilibrium are small differences.
+NOISE = {name: 2e-8 if name.startswith("line") else 1e-11 for name in TARGETS}
+NOISE["line(3d-2p)"] = 1e-6
+
+
+@lru_cache(maxsize=2)
+def weighing(n_max: int = 8, end: float = 20.0) -> Weighing:
+    return weigh(small_setup(n_max, end), TARGETS)
+
+
+def compare(computed: Any, difference: Any, what: object) -> None:
+    for name, ours, theirs in zip(TARGETS, computed, difference, strict=True):
+        assert ours == pytest.approx(theirs, rel=1e-6, abs=NOISE[name]), (what, name)
+
+
+def line_slope(place: Any, n_max: int = 8, end: float = 20.0) -> Any:
+    run = frozen_run(n_max, end)[1]
+    ladder = run.integrated.ladder
+    return slope(
+        lambda h: log_scalars(run, ladder=with_strengths(ladder, place, math.exp(h))),
+    )
+
+
+def continuum_slope(levels: Any, n_max: int = 8, end: float = 20.0) -> Any:
+    run = frozen_run(n_max, end)[1]
+    ladder = run.integrated.ladder
+    return slope(
+        lambda h: log_scalars(run, ladder=with_cross_sections(ladder, levels, math.exp(h))),
+    )
+
+
+def test_two_photon_escape_and_compton() -> None:
+    ours, run = weighing(), frozen_run()[1]
+    equations = run.equations
+    rate = equations.two_photon_rate_per_s
+    by_rate = slope(lambda h: log_scalars(run, two_photon_rate_per_s=rate * math.exp(h)))
+    compare(ours.two_photon, by_rate, "two-photon")
+    by_escape = slope(lambda h: log_scalars(run, treatment=ScaledSobolev(math.exp(h))))
+    compare(ours.escape[:, 0], by_escape, "escape")
+    scales = equations.scales
+    by_compton = slope(
+        lambda h: log_scalars(run, scales=dataclasses.replace(scales, compton_rate=math.exp(h)))
+    )
+    compare(ours.compton, by_compton, "compton")
+
+
+@pytest.mark.parametrize(
+    "name",
+    [
+        "baryon_density_h2",
+        "matter_density_h2",
+        "cmb_temperature_k",
+        "helium_mass_fraction",
+        "effective_neutrinos",
+    ],
+)
+def test_parameters(name: str) -> None:
+    ours, run = weighing(), frozen_run()[1]
+    cosmology = run.setup.cosmology
+    value = getattr(cosmology, name)
+
+    def moved(h: float) -> Any:
+        changed = dataclasses.replace(cosmology, **{name: value * math.exp(h)})
+        return log_scalars(run, cosmology=changed)
+
+    # T moves the optical depth by tens of its own change: a smaller step.
+    difference = slope(moved, 5e-4 if name == "cmb_temperature_k" else 5e-3)
+    for k, target in enumerate(TARGETS):
+        computed = ours.parameter[k, ours.parameters.index(name)]
+        loose = 1e-3 if "3d" in target else 1e-7
+        assert computed == pytest.approx(difference[k], rel=1e-6, abs=loose), target
+
+
+def strong(ours: Weighing, least: float) -> np.ndarray:
+    plain = [k for k, name in enumerate(TARGETS) if not name.startswith("line")]
+    return np.flatnonzero(np.abs(ours.bound_bound[plain]).max(axis=0) > least)
+
+
+def test_a_few_lines_and_levels() -> None:
+    ours, found = weighing(), transitions(frozen_run()[1].integrated.ladder)
+    chosen = strong(ours, 1e-5)
+    for k in chosen[:: max(1, len(chosen) // 2)][:2]:
+        compare(ours.bound_bound[:, k], line_slope(found.place[[k]]), int(k))
+    for level in (1, 5):
+        compare(ours.bound_free[:, level], continuum_slope(np.array([level])), level)
+    assert not ours.bound_free[:, 0].any()  # recombination to the ground state is not in
+
+
+def test_sums_equal_derivatives_by_a_common_factor() -> None:
+    ours, ladder = weighing(), frozen_run()[1].integrated.ladder
+    found = transitions(ladder)
+    compare(ours.bound_bound.sum(axis=1), line_slope(found.place), "bound-bound")
+    everything = np.arange(1, len(ladder.levels))
+    compare(ours.bound_free.sum(axis=1), continuum_slope(everything), "bound-free")
+    for name in TARGETS:
+        processes = ours.processes(name)
+        at = TARGETS.index(name)
+        assert processes["bound_bound"] == pytest.approx(ours.bound_bound[at].sum(), rel=1e-14)
+        assert processes["lyman_alpha"] == processes["escape"]
+
+
+@pytest.mark.slow
+@pytest.mark.parametrize(("end", "count"), [(20.0, 25), (5.0, 5)])
+def test_forty_rates_and_groups_of_the_rest(end: float, count: int) -> None:
+    # z = 5 is T_r = 16 K: held pairs and the elimination without symmetry are in it.
+    ours, ladder = weighing(10, end), frozen_run(10, end)[1].integrated.ladder
+    found, draw = transitions(ladder), np.random.default_rng(20261201)
+    chosen = strong(ours, 1e-5)
+    for k in draw.choice(chosen, count, replace=False):
+        compare(ours.bound_bound[:, k], line_slope(found.place[[k]], 10, end), int(k))
+    for level in draw.choice(np.arange(1, len(ladder.levels)), 3 * count // 5, replace=False):
+        levels = np.array([level])
+        compare(ours.bound_free[:, level], continuum_slope(levels, 10, end), int(level))
+    weak = np.setdiff1d(np.arange(len(found.place)), chosen)
+    for _ in range(count // 5):
+        group = draw.choice(weak, len(weak) // 2, replace=False)
+        difference = line_slope(found.place[group], 10, end)
+        computed = ours.bound_bound[:, group].sum(axis=1)
+        for at, name in enumerate(TARGETS):
+            assert computed[at] == pytest.approx(difference[at], rel=1e-6, abs=NOISE[name])
