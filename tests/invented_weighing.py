@@ -8,6 +8,7 @@ import numpy as np
 
 from levelnet.atomic.levels import LevelSet, hydrogenic_levels
 from levelnet.errors import Outcome
+from levelnet.studies.budget import ErrorBudget
 from levelnet.studies.weighing import Weighing
 from tests.invented_history import invented_setup
 
@@ -80,3 +81,28 @@ def invented_weighing(
         compton=1e-4 * by(count),
         parameter=by(count, len(PARAMETERS)),
     )
+
+
+GROUPS = ("two_photon", "2p-1s escape", "f values n <= 5", "cross sections", "compton")
+
+
+def invented_budget(targets: tuple[str, ...] = ("x_e(900)", "z_*")) -> ErrorBudget:
+    """Contributions of both signs over three decades; the last group contributes nothing."""
+    random = np.random.default_rng(7)
+    shape = (len(targets), len(GROUPS))
+    size = np.array([2e-3, 8e-4, 5e-5, 2e-5, 0.0]) * random.uniform(0.5, 1.0, shape)
+    contribution = size * random.choice([-1.0, 1.0], shape)
+    return ErrorBudget(
+        targets=targets,
+        units=tuple(UNITS.get(name, "1") for name in targets),
+        value=random.uniform(0.01, 0.5, len(targets)),
+        sigma=np.sqrt(np.sum(contribution**2, axis=1)),
+        groups=GROUPS,
+        contribution=contribution,
+        sources=tuple(f"invented source of {name}, {2000 + k}" for k, name in enumerate(GROUPS)),
+    )
+
+
+def band_targets(count: int = 24) -> tuple[str, ...]:
+    """Names of x_e at `count` redshifts from 1700 to 22."""
+    return tuple(f"x_e({z:.6g})" for z in np.geomspace(1700.0, 22.0, count))

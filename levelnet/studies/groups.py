@@ -129,7 +129,7 @@ def _shares(weighing: Weighing, target: str, key: IntArray, names: tuple[str, ..
     found, group = np.unique(key, return_inverse=True)
 
     def summed(where: IntArray, values: FloatArray) -> FloatArray:
-        return np.bincount(where, weights=values, minlength=len(found))
+        return np.asarray(np.bincount(where, values, minlength=len(found)), np.float64)
 
     transitions = weighing.bound_bound[at]
     return Shares(
