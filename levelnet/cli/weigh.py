@@ -85,10 +85,10 @@ def run(options: argparse.Namespace, console: Console) -> int:
     setup = load_setup(options.setup)
     asked = [parse_target(text).name for text in options.of or default_targets(setup)]
     targets = tuple(dict.fromkeys(asked))
-    band = band_targets(setup, _band(options))
-    _check_places(options, targets, bool(band))
+    every = tuple(dict.fromkeys((*targets, *band_targets(setup, _band(options)))))
+    _check_places(options, targets, every)
     start = time.monotonic()
-    weighing = _weighed(setup, targets, band, options, console)
+    weighing = _weighed(setup, every, len(targets), options, console)
     seconds = time.monotonic() - start
     written = _write(weighing, options, console)
     if options.json:
@@ -120,7 +120,9 @@ def _band(options: argparse.Namespace) -> int:
     return band
 
 
-def _check_places(options: argparse.Namespace, targets: tuple[str, ...], band: bool) -> None:
+def _check_places(
+    options: argparse.Namespace, targets: tuple[str, ...], every: tuple[str, ...]
+) -> None:
     """Refuse what cannot be written before any work starts."""
     if options.output is not None:
         check_target(options.output, options.force, options.setup)
@@ -129,6 +131,8 @@ def _check_places(options: argparse.Namespace, targets: tuple[str, ...], band: b
         from ..report.weights import figure_paths
 
         check_folder(options.plot)
+        # The budget of x_e at several redshifts is drawn as a band.
+        band = not options.no_budget and sum(name.startswith("x_e(") for name in every) > 1
         check_free(figure_paths(targets, band, options.plot), options.force)
 
 
@@ -154,25 +158,24 @@ def band_targets(setup: Setup, count: int) -> list[str]:
 def _weighed(
     setup: Setup,
     targets: tuple[str, ...],
-    band: list[str],
+    n_asked: int,
     options: argparse.Namespace,
     console: Console,
 ) -> Weighing:
-    """Weigh what is asked for and, for the budget, x_e along a band of redshifts."""
+    """Weigh all targets; the first `n_asked` were asked for, the rest is the budget's band."""
     from ..studies.budget import error_budget, load_uncertainties
     from ..studies.weigh import weigh
 
     uncertainties = () if options.no_budget else load_uncertainties(options.uncertainties)
     pieces = None if options.no_cache else cache_pieces(console)
     with console.progress() as progress:
-        every = tuple(dict.fromkeys((*targets, *band)))
-        weighing = weigh(setup, every, progress=progress, pieces=pieces)
+        weighing = weigh(setup, targets, progress=progress, pieces=pieces)
     if options.no_budget:
         return weighing
     # The band has served once its errors are known: derivatives by every rate are kept for what
     # was asked for.
     budget = error_budget(weighing, uncertainties)
-    return dataclasses.replace(weighing.first(len(targets)), budget=budget)
+    return dataclasses.replace(weighing.first(n_asked), budget=budget)
 
 
 def _write(weighing: Weighing, options: argparse.Namespace, console: Console) -> list[Path]:

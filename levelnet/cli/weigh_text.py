@@ -16,6 +16,7 @@ if TYPE_CHECKING:
 _COLUMNS = 4  # targets side by side
 _GROUPS = 5  # shells and l listed
 _BAND_ROWS = 9
+_SMALLEST = 1e-3  # part of the whole error below which a group is not listed
 _SOURCE_LETTERS = 72
 
 
@@ -83,25 +84,27 @@ def _ranked_rows(columns: Sequence[list[str]]) -> list[list[str]]:
 
 def _budget_table(head: list[str], budgets: list[dict[str, Any]]) -> list[str]:
     columns = [
-        [
-            f"{part['group']} {_percent(part['contribution'])}"
-            for part in budget["contributions"]
-            if part["contribution"] != 0.0
-        ]
+        [f"{part['group']} {_percent(part['contribution'])}" for part in _listed(budget)]
         for budget in budgets
     ]
     total = ["all", *(f"{100.0 * budget['sigma']:.3g} %" for budget in budgets)]
-    title = "error budget: relative change of J where the rates of a group are 1 sigma higher"
+    title = (
+        "error budget: relative change of J where the rates of a group are 1 sigma higher "
+        f"(what is above {_SMALLEST:g} of all)"
+    )
     return ["", title, *aligned([head, total, *_ranked_rows(columns)])]
 
 
+def _listed(budget: dict[str, Any]) -> list[dict[str, Any]]:
+    limit = _SMALLEST * budget["sigma"]
+    return [part for part in budget["contributions"] if abs(part["contribution"]) > limit]
+
+
 def _source_lines(targets: list[dict[str, Any]]) -> list[str]:
-    """Where the uncertainties of the groups come from, each once, in the order of the first."""
-    budget = targets[0]["budget"]
-    if budget is None:
-        return []
-    rows = [(part["group"], _short(part["source"])) for part in budget["contributions"]]
-    return ["", *aligned([("group", "source of its uncertainty"), *rows])]
+    """Where the uncertainties of the listed groups come from, each once."""
+    budgets = [one["budget"] for one in targets if one["budget"] is not None]
+    rows = {part["group"]: _short(part["source"]) for one in budgets for part in _listed(one)}
+    return ["", *aligned([("group", "source of its uncertainty"), *rows.items()])] if rows else []
 
 
 def _band_lines(band: dict[str, Any] | None) -> list[str]:

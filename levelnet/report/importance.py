@@ -63,7 +63,7 @@ def importance_figure(weighing: Weighing, target: str, label: str) -> Figure:
         for axes, letter, title in zip(
             panels,
             "abc",
-            ("bound-free", "bound-bound, out of a level", "bound-bound, by shells"),
+            ("bound-free", "bound-bound, by level", "bound-bound, by shells"),
             strict=True,
         ):
             _ticks(axes, "x", n)

@@ -21,7 +21,7 @@ if TYPE_CHECKING:
     from matplotlib.figure import Figure
 
 _BARS = 10  # more would not be legible in half a page's height
-_LETTERS = 22  # in a line of a name beside a bar
+_LETTERS = 26  # in a line of a name beside a bar
 _SYMBOLS = {
     "hubble_km_s_mpc": "$H_0$",
     "baryon_density_h2": r"$\omega_b$",
@@ -189,8 +189,8 @@ def draw_bars(axes: Axes, names: Sequence[str], values: Sequence[float]) -> None
     seen = np.isfinite(sizes) & (sizes > 0.0)
     top = float(sizes[seen].max()) if seen.any() else 1.0
     smallest = float(sizes[seen].min()) if seen.any() else 1.0
-    # Two decades at least in all, or small differences look large; at most eight of bars.
-    low = float(np.clip(0.3 * smallest, 1e-8 * top, 0.025 * top))
+    # Two decades at least in all, or small differences look large; at most six of bars.
+    low = float(np.clip(0.3 * smallest, 1e-6 * top, 0.025 * top))
     for place, value in enumerate(values):
         if not seen[place]:
             continue
