@@ -12,7 +12,7 @@ from ..errors import InputError
 from .console import Console
 from .output import print_json, time_text
 from .paths import check_folder, check_target
-from .solve import cache_pieces
+from .solve import announce_cost, cache_pieces
 from .weigh_text import weighing_summary
 from .weigh_values import weighing_values
 
@@ -30,6 +30,7 @@ DESCRIPTION = (
 )
 EXAMPLE = 'levelnet weigh setup.toml --of "x_e(900)" --of "z_*" --output weights.h5'
 _BAND, _MOST = 24, 1000
+_HISTORIES = 3.0  # as long as this many a weighing takes at most
 _DEFAULT_REDSHIFTS = (1100.0, 200.0)
 
 
@@ -167,6 +168,7 @@ def _weighed(
     from ..studies.weigh import weigh
 
     uncertainties = () if options.no_budget else load_uncertainties(options.uncertainties)
+    announce_cost(setup, console, _HISTORIES)
     pieces = None if options.no_cache else cache_pieces(console)
     with console.progress() as progress:
         weighing = weigh(setup, targets, progress=progress, pieces=pieces)
