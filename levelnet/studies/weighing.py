@@ -35,7 +35,7 @@ class Weighing:
     targets, units : tuple of str, length n_targets
         The scalars J, such as "x_e(900)", and their units ("1" where there is none).
     value : ndarray, shape (n_targets,)
-        J.
+        J, in units of `units`.
     levels : LevelSet
         Every level of hydrogen.
     upper, lower : ndarray of int, shape (n_transitions,)
@@ -44,15 +44,15 @@ class Weighing:
         Lines to the ground state that exchange photons: "2p-1s", ...
     parameters : tuple of str, length n_parameters
         Parameters of the cosmology, named as in the setup.
-    bound_bound : ndarray, shape (n_targets, n_transitions)
+    bound_bound : ndarray, shape (n_targets, n_transitions), dimensionless
         By the strength of each dipole transition.
-    bound_free : ndarray, shape (n_targets, n_levels)
+    bound_free : ndarray, shape (n_targets, n_levels), dimensionless
         By each level's cross section: recombination and photoionization together.
-    escape : ndarray, shape (n_targets, n_lines)
+    escape : ndarray, shape (n_targets, n_lines), dimensionless
         By the rate at which photons of each line escape.
-    two_photon, compton : ndarray, shape (n_targets,)
+    two_photon, compton : ndarray, shape (n_targets,), dimensionless
         By the 2s-1s rate, and by the Compton rate that couples T_m to T_r.
-    parameter : ndarray, shape (n_targets, n_parameters)
+    parameter : ndarray, shape (n_targets, n_parameters), dimensionless
         By the ln of each parameter of the cosmology, the others held; dark energy closes the
         budget.
     budget : ErrorBudget or None
