@@ -147,18 +147,34 @@ def test_long_names_of_groups_are_folded() -> None:
 
 
 def test_files_are_whole_and_the_same_each_time(tmp_path: Path) -> None:
-    weighing = complete(n_max=4)
-    first = save_weighing_figures(weighing, tmp_path / "a")
-    again = save_weighing_figures(weighing, tmp_path / "b")
-    assert first == figure_paths(weighing.targets, True, tmp_path / "a")
-    assert sorted((tmp_path / "a").iterdir()) == sorted(first)
-    for one, other in zip(first, again, strict=True):
-        data = one.read_bytes()
-        assert data == other.read_bytes()
+    weighing = complete(n_max=4).first(1)
+    first = save_weighing_figures(weighing, tmp_path)
+    assert first == figure_paths(weighing.targets, True, tmp_path)
+    assert sorted(tmp_path.iterdir()) == sorted(first)
+    again = {
+        "map-x_e-900.svg": importance_figure(weighing, TARGET, target_label(TARGET)),
+        "ranking-x_e-900.svg": ranking_figure(weighing, TARGET),
+        "error-band.pdf": band_figure(weighing.budget),
+    }
+    for path in first:
+        data = path.read_bytes()
         assert not re.search(rb"<dc:date>|CreationDate|/Type3", data)
-    with pytest.raises(InputError, match="exists already"):
-        save_weighing_figures(weighing, tmp_path / "a")
-    save_weighing_figures(weighing, tmp_path / "a", force=True)
+        if path.name in again:
+            assert data == render(again[path.name], path.suffix[1:])
+
+
+def test_existing_figures_are_kept_unless_forced(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    monkeypatch.setattr("levelnet.report.style.render", lambda figure, kind: b"drawn")
+    weighing = complete(n_max=3)
+    kept = tmp_path / "error-band.pdf"
+    kept.write_text("mine")
+    with pytest.raises(InputError, match=r"error-band\.pdf: exists already"):
+        save_weighing_figures(weighing, tmp_path)
+    assert list(tmp_path.iterdir()) == [kept]
+    save_weighing_figures(weighing, tmp_path, force=True)
+    assert kept.read_bytes() == b"drawn"
 
 
 def test_large_maps_stay_small_on_disk() -> None:
