@@ -30,6 +30,8 @@ if TYPE_CHECKING:
     from .history.setup import Setup, load_setup
     from .store.read import read
     from .store.write import write
+    from .studies.weigh import weigh
+    from .studies.weighing import Weighing
 
 __version__ = "0.1.0"
 
@@ -47,6 +49,7 @@ _HOMES = {
     "Outcome": "errors",
     "Setup": "history.setup",
     "SolveError": "errors",
+    "Weighing": "studies.weighing",
     "distill": "distilled.build",
     "effective_rates": "distilled.effective",
     "einstein_a": "atomic.bound_bound",
@@ -63,6 +66,7 @@ _HOMES = {
     "solve": "history.run",
     "two_photon_profile": "atomic.two_photon",
     "two_photon_rate": "atomic.two_photon",
+    "weigh": "studies.weigh",
     "with_expansion": "background",
     "write": "store.write",
 }
@@ -81,6 +85,7 @@ __all__ = [
     "Outcome",
     "Setup",
     "SolveError",
+    "Weighing",
     "__version__",
     "distill",
     "effective_rates",
@@ -98,6 +103,7 @@ __all__ = [
     "solve",
     "two_photon_profile",
     "two_photon_rate",
+    "weigh",
     "with_expansion",
     "write",
 ]

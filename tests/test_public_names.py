@@ -25,6 +25,7 @@ PUBLIC = {
     "Outcome",
     "Setup",
     "SolveError",
+    "Weighing",
     "distill",
     "effective_rates",
     "einstein_a",
@@ -41,6 +42,7 @@ PUBLIC = {
     "solve",
     "two_photon_profile",
     "two_photon_rate",
+    "weigh",
     "with_expansion",
     "write",
 }
@@ -68,6 +70,7 @@ SIGNATURES = {
     "history_from_table": {"table": ..., "cosmology": ...},
     "load_setup": {"path": ...},
     "solve": {"setup": ...},
+    "weigh": {"setup": ..., "targets": ...},
     "write": {"result": ..., "path": ...},
     "read": {"path": ...},
 }

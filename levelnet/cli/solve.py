@@ -99,15 +99,9 @@ def compute(setup: Setup, console: Console, cache: bool) -> tuple[History, float
     tuple of History and float
         The result, and the wall time in s.
     """
-    from ..history.cost import check_memory, estimate
     from ..history.run import solve
 
-    check_memory(setup)
-    cost = estimate(setup)
-    if cost.seconds > _LONG_S or cost.memory_bytes > _LARGE_BYTES:
-        console.notice(
-            f"estimated: {time_text(cost.seconds)}, {size_text(cost.memory_bytes)} of memory"
-        )
+    announce_cost(setup, console)
     pieces = cache_pieces(console) if cache else None
     start = time.monotonic()
     with console.progress() as progress:
@@ -117,6 +111,16 @@ def compute(setup: Setup, console: Console, cache: bool) -> tuple[History, float
                 warnings.filterwarnings("ignore", re.escape(one.value), AccuracyWarning)
             history = solve(setup, progress=progress, pieces=pieces)
     return history, time.monotonic() - start
+
+
+def announce_cost(setup: Setup, console: Console, histories: float = 1.0) -> None:
+    """Refuse what cannot fit; say what work as long as some histories will take, if it is much."""
+    from ..history.cost import check_memory
+
+    cost = check_memory(setup)
+    seconds = histories * cost.seconds
+    if seconds > _LONG_S or cost.memory_bytes > _LARGE_BYTES:
+        console.notice(f"estimated: {time_text(seconds)}, {size_text(cost.memory_bytes)} of memory")
 
 
 def cache_pieces(console: Console) -> Any:

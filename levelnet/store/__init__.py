@@ -5,6 +5,7 @@ from .layout import LAYOUT_NAME, LAYOUT_VERSION, describe_layout
 from .read import read, read_attributes, read_table
 from .table_layout import DISTILLED_LAYOUT, TABLE_LAYOUT, describe_table_layout
 from .text import write_csv, write_distilled_csv
+from .weighing_layout import WEIGHING_LAYOUT, describe_weighing_layout
 from .whole_file import check_output, whole_file
 from .write import write, write_distilled
 
@@ -13,9 +14,11 @@ __all__ = [
     "LAYOUT_NAME",
     "LAYOUT_VERSION",
     "TABLE_LAYOUT",
+    "WEIGHING_LAYOUT",
     "check_output",
     "describe_layout",
     "describe_table_layout",
+    "describe_weighing_layout",
     "export_paths",
     "read",
     "read_attributes",

@@ -24,16 +24,20 @@ from .digest import content_digest, seal_fault
 from .hdf5 import Damage, load
 from .schema import Content, Group, Layout
 from .table_layout import DISTILLED_LAYOUT, TABLE_LAYOUT
+from .weighing_layout import WEIGHING_LAYOUT
 
 if TYPE_CHECKING:
     from ..distilled.history import FastHistory
     from ..distilled.table import EffectiveTable
+    from ..studies.weighing import Weighing
+
+    Record = History | EffectiveTable | FastHistory | Weighing
 
 _HDF5_SIGNATURE = b"\x89HDF\r\n\x1a\n"
 
 
-def read(path: str | Path) -> History | EffectiveTable | FastHistory:
-    """Read a history, a table of effective rates, or a history made from one.
+def read(path: str | Path) -> Record:
+    """Read a history, a table of effective rates, a history made from one, or a weighing.
 
     Parameters
     ----------
@@ -42,7 +46,7 @@ def read(path: str | Path) -> History | EffectiveTable | FastHistory:
 
     Returns
     -------
-    History, EffectiveTable or FastHistory
+    History, EffectiveTable, FastHistory or Weighing
         Equal to what was written, to the bit.
 
     Raises
@@ -53,7 +57,7 @@ def read(path: str | Path) -> History | EffectiveTable | FastHistory:
     return _record(path, read_content(path))
 
 
-def _record(path: str | Path, content: Content) -> History | EffectiveTable | FastHistory:
+def _record(path: str | Path, content: Content) -> Record:
     kind, make = _MAKERS[str(content.attributes["layout"])]
     try:
         return make(content)
@@ -194,6 +198,26 @@ def table_of(content: Content) -> EffectiveTable:
     )
 
 
+def weighing_of(content: Content) -> Weighing:
+    """Make the weighing that :func:`levelnet.store.write.content_of` took apart."""
+    from ..studies.budget import ErrorBudget
+    from ..studies.weighing import Weighing
+
+    parts = _all_fields(content, WEIGHING_LAYOUT)
+    levels = LevelSet(**parts.pop("levels"))
+    for name in ("upper", "lower"):
+        if len(parts[name]) and not 0 <= parts[name].min() <= parts[name].max() < len(levels):
+            raise FileFormatError(f"{name}: names levels that are not in the file")
+    budget = parts.pop("budget", None)
+    return Weighing(
+        setup=parse_setup(str(content.attributes["setup"]), "stored setup"),
+        outcome=_outcome(content),
+        levels=levels,
+        budget=None if budget is None else ErrorBudget(**budget),
+        **parts,
+    )
+
+
 def _fields(content: Content, group: Group) -> dict[str, Any]:
     """Collect the fields of the records in one group: {"channels": {"names": ..., ...}, ...}."""
     fields: dict[str, Any] = {}
@@ -215,8 +239,9 @@ def _same_redshift(content: Content, stored: Any) -> bool:
     return bool(stored.tobytes() == redshift.tobytes())
 
 
-_MAKERS: dict[str, tuple[Layout, Callable[[Content], History | EffectiveTable | FastHistory]]] = {
+_MAKERS: dict[str, tuple[Layout, Callable[[Content], Record]]] = {
     layout.LAYOUT_NAME: (layout.HISTORY_LAYOUT, history_of),
     TABLE_LAYOUT.name: (TABLE_LAYOUT, table_of),
     DISTILLED_LAYOUT.name: (DISTILLED_LAYOUT, distilled_of),
+    WEIGHING_LAYOUT.name: (WEIGHING_LAYOUT, weighing_of),
 }

@@ -50,6 +50,11 @@ class Group:
     species: str = ""
 
     @property
+    def part(self) -> str:
+        """Field of the record that an optional group holds."""
+        return self.variables[0].field.partition(".")[0]
+
+    @property
     def attributes(self) -> dict[str, str]:
         """The attributes on disk."""
         given = {"description": self.description}

@@ -20,6 +20,7 @@ from .digest import content_digest, seal
 from .provenance import provenance
 from .schema import Content, Group, Layout, Stored, Variable, number_type
 from .table_layout import DISTILLED_LAYOUT, TABLE_LAYOUT
+from .weighing_layout import WEIGHING_LAYOUT
 from .whole_file import whole_file
 
 if TYPE_CHECKING:
@@ -27,22 +28,25 @@ if TYPE_CHECKING:
 
     from ..distilled.history import FastHistory
     from ..distilled.table import EffectiveTable
+    from ..studies.weighing import Weighing
 
-    Record = History | EffectiveTable | FastHistory
+    Record = History | EffectiveTable | FastHistory | Weighing
 
 # Chunks of at most 64 redshifts x 2048 levels (1 MiB), the size of HDF5's chunk cache.
 _CHUNK = (64, 2048)
 _CHUNK_ONE_DIMENSION = 16384
 
 
-def write(result: History | EffectiveTable, path: str | Path, force: bool = False) -> None:
-    """Write a history, or a table of effective rates, to an HDF5 file.
+def write(
+    result: History | EffectiveTable | Weighing, path: str | Path, force: bool = False
+) -> None:
+    """Write a history, a table of effective rates, or a weighing to an HDF5 file.
 
     Parameters
     ----------
-    result : History or EffectiveTable
-        What to store, in the layout of :mod:`levelnet.store.layout` or
-        :mod:`levelnet.store.table_layout`.
+    result : History, EffectiveTable or Weighing
+        What to store, in the layout of :mod:`levelnet.store.layout`,
+        :mod:`levelnet.store.table_layout` or :mod:`levelnet.store.weighing_layout`.
     path : str or Path
         The file; it appears whole or not at all.
     force : bool
@@ -80,28 +84,28 @@ def write_distilled(
     force : bool
         True allows an existing file to be replaced.
     """
-    content = Content(attributes=_root_attributes(DISTILLED_LAYOUT, setup))
-    _add_outcome(content, history.outcome)
-    optional = () if history.observables is None else DISTILLED_LAYOUT.optional
-    for group in (*DISTILLED_LAYOUT.required, *optional):
-        _add_group(content, group, history, None)
+    content = _content(DISTILLED_LAYOUT, history, setup)
     content.attributes["digest"] = content_digest(content)
     with whole_file(path, force) as raw:
         save(content, raw)
         seal(raw)
 
 
-def content_of(result: History | EffectiveTable) -> Content:
+def content_of(result: History | EffectiveTable | Weighing) -> Content:
     """Everything a file says about a record, with the digest over all of it."""
     from ..distilled.table import EffectiveTable
+    from ..studies.weighing import Weighing
 
     if isinstance(result, History):
         content = _history_content(result)
     elif isinstance(result, EffectiveTable):
-        content = _table_content(result)
+        content = _content(TABLE_LAYOUT, result, result.setup)
+    elif isinstance(result, Weighing):
+        content = _content(WEIGHING_LAYOUT, result, result.setup)
     else:
         raise InputError(
-            f"write: a {type(result).__name__} cannot be stored; a History or EffectiveTable can"
+            f"write: a {type(result).__name__} cannot be stored; "
+            "a History, EffectiveTable or Weighing can"
         )
     content.attributes["digest"] = content_digest(content)
     return content
@@ -120,11 +124,15 @@ def _history_content(history: History) -> Content:
     return content
 
 
-def _table_content(table: EffectiveTable) -> Content:
-    content = Content(attributes=_root_attributes(TABLE_LAYOUT, table.setup))
-    optional = () if table.certificate is None else TABLE_LAYOUT.optional
-    for group in (*TABLE_LAYOUT.required, *optional):
-        _add_group(content, group, table, None)
+def _content(kind: Layout, record: Record, setup: Setup) -> Content:
+    """Content of a file whose groups are fixed, but for parts that the record may lack."""
+    content = Content(attributes=_root_attributes(kind, setup))
+    outcome = getattr(record, "outcome", None)
+    if outcome is not None:
+        _add_outcome(content, outcome)
+    optional = [group for group in kind.optional if getattr(record, group.part) is not None]
+    for group in (*kind.required, *optional):
+        _add_group(content, group, record, None)
     return content
 
 

@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
+from typing import TYPE_CHECKING
 
 import numpy as np
 
@@ -10,6 +11,9 @@ from ..arrays import FloatArray, IntArray, frozen_array
 from ..atomic.levels import LevelSet
 from ..errors import InputError, Outcome
 from ..history.setup import Setup
+
+if TYPE_CHECKING:
+    from .budget import ErrorBudget
 
 PROCESSES = ("two_photon", "bound_bound", "bound_free", "escape", "compton")
 """Processes that make up the network; the sum over one is the derivative by a common factor."""
@@ -31,7 +35,7 @@ class Weighing:
     targets, units : tuple of str, length n_targets
         The scalars J, such as "x_e(900)", and their units ("1" where there is none).
     value : ndarray, shape (n_targets,)
-        J.
+        J, in units of `units`.
     levels : LevelSet
         Every level of hydrogen.
     upper, lower : ndarray of int, shape (n_transitions,)
@@ -40,17 +44,20 @@ class Weighing:
         Lines to the ground state that exchange photons: "2p-1s", ...
     parameters : tuple of str, length n_parameters
         Parameters of the cosmology, named as in the setup.
-    bound_bound : ndarray, shape (n_targets, n_transitions)
+    bound_bound : ndarray, shape (n_targets, n_transitions), dimensionless
         By the strength of each dipole transition.
-    bound_free : ndarray, shape (n_targets, n_levels)
+    bound_free : ndarray, shape (n_targets, n_levels), dimensionless
         By each level's cross section: recombination and photoionization together.
-    escape : ndarray, shape (n_targets, n_lines)
+    escape : ndarray, shape (n_targets, n_lines), dimensionless
         By the rate at which photons of each line escape.
-    two_photon, compton : ndarray, shape (n_targets,)
+    two_photon, compton : ndarray, shape (n_targets,), dimensionless
         By the 2s-1s rate, and by the Compton rate that couples T_m to T_r.
-    parameter : ndarray, shape (n_targets, n_parameters)
+    parameter : ndarray, shape (n_targets, n_parameters), dimensionless
         By the ln of each parameter of the cosmology, the others held; dark energy closes the
         budget.
+    budget : ErrorBudget or None
+        What uncertain rates make of these targets, and of further ones such as a band of x_e(z),
+        where that was asked for.
     """
 
     setup: Setup
@@ -69,6 +76,7 @@ class Weighing:
     two_photon: FloatArray
     compton: FloatArray
     parameter: FloatArray
+    budget: ErrorBudget | None = None
 
     def __post_init__(self) -> None:
         """Check shapes and make every array read-only."""
@@ -88,14 +96,23 @@ class Weighing:
             raise InputError(f'target "{target}": weighed were {", ".join(self.targets)}')
         return self.targets.index(target)
 
+    def first(self, count: int) -> Weighing:
+        """The same for the first `count` targets alone."""
+        by_target = ("value", "bound_bound", "bound_free", "escape", "two_photon", "compton")
+        cut = {name: getattr(self, name)[:count] for name in (*by_target, "parameter")}
+        return replace(self, targets=self.targets[:count], units=self.units[:count], **cut)
+
     def processes(self, target: str) -> dict[str, float]:
-        """Derivative by a common factor on each process, and on Lyman-alpha's escape alone."""
+        """Derivative by a common factor on each process, and on Lyman-alpha's escape alone.
+
+        That of a line that is closed is 0.
+        """
         at = self.index(target)
         return {
             "two_photon": float(self.two_photon[at]),
             "bound_bound": float(self.bound_bound[at].sum()),
             "bound_free": float(self.bound_free[at].sum()),
-            "lyman_alpha": float(self.escape[at, self.lines.index("2p-1s")]),
+            "lyman_alpha": float(self.escape[at, [line == "2p-1s" for line in self.lines]].sum()),
             "escape": float(self.escape[at].sum()),
             "compton": float(self.compton[at]),
         }

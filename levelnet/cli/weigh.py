@@ -1,0 +1,195 @@
+"""``levelnet weigh``: which rates the answer hangs on, and the error they leave in it."""
+
+from __future__ import annotations
+
+import argparse
+import dataclasses
+import time
+from pathlib import Path
+from typing import TYPE_CHECKING
+
+from ..errors import InputError
+from .console import Console
+from .output import print_json, time_text
+from .paths import check_folder, check_target
+from .solve import announce_cost, cache_pieces
+from .weigh_text import weighing_summary
+from .weigh_values import weighing_values
+
+if TYPE_CHECKING:
+    from ..history.setup import Setup
+    from ..studies.weighing import Weighing
+
+NAME = "weigh"
+SUMMARY = "weigh every rate: what each does to x_e(z) and the observables"
+DESCRIPTION = (
+    "Solve a setup and give, for each target J, d ln J / d ln R for every rate R (each dipole "
+    "transition, cross section, line escape, two-photon and Compton rate) and for each parameter "
+    "of the cosmology, and the error that the uncertainties of the rates leave in J. Nothing is "
+    "written unless --output or --plot asks for it."
+)
+EXAMPLE = 'levelnet weigh setup.toml --of "x_e(900)" --of "z_*" --output weights.h5'
+_BAND, _MOST = 24, 1000
+_HISTORIES = 3.0  # as long as this many a weighing takes at most
+_DEFAULT_REDSHIFTS = (1100.0, 200.0)
+
+
+def add_arguments(parser: argparse.ArgumentParser) -> None:
+    """Declare the options of this command."""
+    parser.add_argument("setup", metavar="SETUP", type=Path, help="setup file (TOML)")
+    parser.add_argument(
+        "--of",
+        metavar="TARGET",
+        action="append",
+        help="what to weigh, may be repeated: x_e(Z), T_m(Z), optical_depth(Z), line(3d-2p), z_*, "
+        "visibility_peak_redshift, visibility_width, last_scattering_time_s, r_s, k_D, z_drag, "
+        "r_drag (default: z_*, x_e(1100) and x_e(200), as far as the grid reaches)",
+    )
+    parser.add_argument(
+        "--uncertainties",
+        metavar="FILE",
+        type=Path,
+        help="uncertainties of the rates for the error budget (CSV; default: a table of published "
+        "ones)",
+    )
+    parser.add_argument("--no-budget", action="store_true", help="no error budget")
+    parser.add_argument(
+        "--band",
+        metavar="N",
+        type=int,
+        help=f"redshifts at which the budget gives the error of x_e; 0 for none (default: {_BAND})",
+    )
+    parser.add_argument(
+        "--top",
+        metavar="N",
+        type=int,
+        default=10,
+        help="transitions and levels listed for each target (default: 10)",
+    )
+    parser.add_argument(
+        "-o", "--output", metavar="FILE", type=Path, help="write every number to an HDF5 file"
+    )
+    parser.add_argument(
+        "--plot", metavar="FOLDER", type=Path, help="write figures (SVG and PDF) into FOLDER"
+    )
+    parser.add_argument("--force", action="store_true", help="overwrite file and figures")
+    parser.add_argument(
+        "--no-cache", action="store_true", help="neither read nor fill the cache of atomic rates"
+    )
+
+
+def run(options: argparse.Namespace, console: Console) -> int:
+    """Weigh, budget, write, print; 0 if the outcome is ok, 1 if not."""
+    from ..history.setup import load_setup
+    from ..studies.targets import parse_target
+
+    setup = load_setup(options.setup)
+    asked = [parse_target(text).name for text in options.of or default_targets(setup)]
+    targets = tuple(dict.fromkeys(asked))
+    every = tuple(dict.fromkeys((*targets, *band_targets(setup, _band(options)))))
+    _check_places(options, targets, every)
+    start = time.monotonic()
+    weighing = _weighed(setup, every, len(targets), options, console)
+    seconds = time.monotonic() - start
+    written = _write(weighing, options, console)
+    if options.json:
+        values = weighing_values(weighing, options.top)
+        print_json({**values, "written": written, "seconds": seconds})
+    else:
+        print(weighing_summary(weighing, options.top))
+        for path in written:
+            print(f"{'written':<22}{path}")
+        print(f"{'time':<22}{time_text(seconds)}")
+    if not weighing.outcome.ok:
+        console.error(f"{weighing.outcome.name}: {weighing.outcome.value}", kind="")
+        return 1
+    return 0
+
+
+def _band(options: argparse.Namespace) -> int:
+    """Redshifts of the band, after a check of the options about numbers."""
+    for name in ("uncertainties", "band"):
+        if options.no_budget and getattr(options, name) is not None:
+            raise InputError(f"--{name}: is for the error budget, which --no-budget leaves out")
+    if not 1 <= options.top <= _MOST:
+        raise InputError(f"--top = {options.top}: allowed are 1 to {_MOST}")
+    if options.no_budget:
+        return 0
+    band = _BAND if options.band is None else int(options.band)
+    if band != 0 and not 2 <= band <= _MOST:
+        raise InputError(f"--band = {band}: allowed are 0 and 2 to {_MOST}")
+    return band
+
+
+def _check_places(
+    options: argparse.Namespace, targets: tuple[str, ...], every: tuple[str, ...]
+) -> None:
+    """Refuse what cannot be written before any work starts."""
+    if options.output is not None:
+        check_target(options.output, options.force, options.setup)
+    if options.plot is not None:
+        from ..report.figures import check_free
+        from ..report.weights import figure_paths
+
+        check_folder(options.plot)
+        # The budget of x_e at several redshifts is drawn as a band.
+        band = not options.no_budget and sum(name.startswith("x_e(") for name in every) > 1
+        check_free(figure_paths(targets, band, options.plot), options.force)
+
+
+def default_targets(setup: Setup) -> list[str]:
+    """What is weighed where nothing is asked for: all of it inside the grid."""
+    grid = setup.grid
+    inside = [z for z in _DEFAULT_REDSHIFTS if grid.redshift_end <= z <= grid.redshift_start]
+    return ["z_*", *(f"x_e({z:g})" for z in inside)]
+
+
+def band_targets(setup: Setup, count: int) -> list[str]:
+    """x_e at `count` redshifts spread evenly over the grid, ends included."""
+    import numpy as np
+
+    from ..studies.targets import parse_target
+
+    redshifts = np.linspace(setup.grid.redshift_start, setup.grid.redshift_end, count)
+    # The ends as they are, or rounding might lead out of the grid; between, few digits.
+    redshifts[1:-1] = [float(f"{z:.4g}") for z in redshifts[1:-1]]
+    return [parse_target(f"x_e({z!r})").name for z in redshifts.tolist()]
+
+
+def _weighed(
+    setup: Setup,
+    targets: tuple[str, ...],
+    n_asked: int,
+    options: argparse.Namespace,
+    console: Console,
+) -> Weighing:
+    """Weigh all targets; the first `n_asked` were asked for, the rest is the budget's band."""
+    from ..studies.budget import error_budget, load_uncertainties
+    from ..studies.weigh import weigh
+
+    uncertainties = () if options.no_budget else load_uncertainties(options.uncertainties)
+    announce_cost(setup, console, _HISTORIES)
+    pieces = None if options.no_cache else cache_pieces(console)
+    with console.progress() as progress:
+        weighing = weigh(setup, targets, progress=progress, pieces=pieces)
+    if options.no_budget:
+        return weighing
+    # The band has served once its errors are known: derivatives by every rate are kept for what
+    # was asked for.
+    budget = error_budget(weighing, uncertainties)
+    return dataclasses.replace(weighing.first(n_asked), budget=budget)
+
+
+def _write(weighing: Weighing, options: argparse.Namespace, console: Console) -> list[Path]:
+    written: list[Path] = []
+    if options.output is not None:
+        from ..store import write
+
+        write(weighing, options.output, force=options.force)
+        written.append(options.output)
+    if options.plot is not None:
+        from ..report.weights import save_weighing_figures
+
+        with console.progress() as progress:
+            written += save_weighing_figures(weighing, options.plot, options.force, progress)
+    return written

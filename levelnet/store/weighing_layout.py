@@ -1,0 +1,96 @@
+"""Everything in a file that holds a weighing; see :mod:`levelnet.store.layout`."""
+
+from __future__ import annotations
+
+from . import layout
+from .schema import Group, Kind, Layout, Variable, describe
+
+
+def _position(name: str, long_name: str) -> Variable:
+    return Variable(name, (name,), "1", long_name, "", "int64", "n l" if name == "level" else "")
+
+
+def _level(name: str, units: str, long_name: str, kind: Kind = "float64") -> Variable:
+    field = f"levels.{name}_ev" if units == "eV" else f"levels.{name}"
+    coordinates = "" if name in {"n", "l"} else "n l"
+    return Variable(name, ("level",), units, long_name, field, kind, coordinates)
+
+
+def _end(name: str) -> Variable:
+    text = f"position of the {name} level of the dipole transition"
+    return Variable(name, ("transition",), "1", text, name, "int64")
+
+
+def _weight(name: str, of: str, over: str = "", field: str = "") -> Variable:
+    """Derivative of ln of each target by ln of a rate."""
+    dimensions = ("target", over) if over else ("target",)
+    text = f"d ln(target) / d ln({of})"
+    coordinates = "n l" if over == "level" else ""
+    return Variable(name, dimensions, "1", text, field or name, coordinates=coordinates)
+
+
+def _text(name: str, over: str, long_name: str, field: str) -> Variable:
+    return Variable(name, (over,), "", long_name, field, "text")
+
+
+WEIGHING = Group(
+    "weighing",
+    "derivatives of ln of each target by ln of every rate, the other rates held; a rate and its "
+    "inverse scale together",
+    (
+        _text("target", "target", "scalar of the history", "targets"),
+        _text("unit", "target", "unit of the value of the target", "units"),
+        Variable("value", ("target",), "1", "value of the target in its unit", "value"),
+        _position("level", "position of the level, from 0"),
+        _level("n", "1", "principal quantum number", "int64"),
+        _level("l", "1", "orbital quantum number; -1 for a whole shell", "int64"),
+        _level("statistical_weight", "1", "statistical weight, nuclear spin not counted"),
+        _level("energy", "eV", "energy above the ground state"),
+        _level("ionization_energy", "eV", "energy that ionizes the level"),
+        _position("transition", "position of the dipole transition, from 0"),
+        _end("upper"),
+        _end("lower"),
+        _text("line", "line", "line to the ground state whose photons escape", "lines"),
+        _text("parameter", "parameter", "parameter of the cosmology", "parameters"),
+        _weight("bound_bound", "strength of the dipole transition", "transition"),
+        _weight("bound_free", "cross section of the level", "level"),
+        _weight("escape", "rate at which photons of the line escape", "line"),
+        _weight("two_photon", "2s-1s two-photon rate"),
+        _weight("compton", "Compton rate between matter and radiation temperature"),
+        _weight("cosmology", "parameter", "parameter", "parameter"),
+    ),
+)
+
+BUDGET = Group(
+    "budget",
+    "error of each target that follows from the uncertainties of rates",
+    (
+        _text("target", "target", "scalar of the history", "budget.targets"),
+        _text("unit", "target", "unit of the value of the target", "budget.units"),
+        Variable("value", ("target",), "1", "value of the target in its unit", "budget.value"),
+        _text("group", "group", "rates that err together", "budget.groups"),
+        _text("source", "group", "where their uncertainty comes from", "budget.sources"),
+        Variable(
+            "contribution",
+            ("target", "group"),
+            "1",
+            "relative change of the target by one sigma of the group, signed",
+            "budget.contribution",
+        ),
+        Variable("sigma", ("target",), "1", "relative 1-sigma error of the target", "budget.sigma"),
+    ),
+)
+
+WEIGHING_LAYOUT = Layout(
+    "levelnet weighing",
+    1,
+    "a weighing",
+    layout.ROOT_ATTRIBUTES,
+    (WEIGHING,),
+    (BUDGET,),
+)
+
+
+def describe_weighing_layout() -> str:
+    """Return the layout as text: one line for each group, dataset and attribute of the file."""
+    return describe(WEIGHING_LAYOUT, (*WEIGHING_LAYOUT.required, *WEIGHING_LAYOUT.optional))
