@@ -12,8 +12,8 @@ c_s = c/sqrt(3 (1 + R)), eta conformal time, and z_end the lowest redshift of th
 
 There is no reionization in any of them. Above the first point x_e counts as 1: only k_D sees it, by
 a relative error below half the neutral fraction there (1.4e-10 at T_r = 9000 K, 1.4e-8 at 7000 K,
-5e-7 at 6000 K, in Saha equilibrium). Helium's electrons are not in x_e: before z = 1800 they raise
-k_D by 0.5 per cent. Tight coupling, on which k_D rests, is taken to hold up to z_*, as in the
+5e-7 at 6000 K, in Saha equilibrium). Helium's electrons are not in x_e: before z = 1800 they
+would raise k_D by about 0.5 per cent. Tight coupling, on which k_D rests, is taken to hold up to z_*, as in the
 references, although it ceases there.
 
 Every observable is a functional of ln(sigma_T n_e), ln H and ln R; its change is kept as weights on
@@ -129,8 +129,11 @@ def observe(
     Raises
     ------
     InputError
-        If an electron fraction is not positive and finite, or their number is wrong.
+        If an electron fraction is not positive and finite, their number is wrong, or a name is not
+        known.
     """
+    if unknown := [name for name in names if name not in UNITS]:
+        raise InputError(f'observable "{unknown[0]}" is not known; known are {", ".join(UNITS)}')
     ionized = np.asarray(electron_fraction, dtype=float)
     if ionized.shape != grid.points.shape or not np.all((ionized > 0.0) & np.isfinite(ionized)):
         raise InputError(f"electron_fraction: {len(grid.points)} positive numbers are needed")

@@ -351,6 +351,12 @@ def test_wrong_electron_fractions(wrong: float) -> None:
         observe(COSMOLOGY, grid, ionized[:5])
 
 
+def test_unknown_observable() -> None:
+    grid = panels()
+    with pytest.raises(InputError, match='observable "z_star" is not known; known are last_scatt'):
+        observe(COSMOLOGY, grid, fraction(grid.points), names=("z_star",))
+
+
 @pytest.mark.parametrize("ends", [(-3.0, -5.0), (-3.0, -3.0), (math.nan, -3.0), (-math.inf, -3.0)])
 def test_wrong_ends(ends: tuple[float, float]) -> None:
     with pytest.raises(InputError, match="must be below end_s"):
