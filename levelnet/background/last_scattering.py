@@ -13,8 +13,8 @@ c_s = c/sqrt(3 (1 + R)), eta conformal time, and z_end the lowest redshift of th
 There is no reionization in any of them. Above the first point x_e counts as 1: only k_D sees it, by
 a relative error below half the neutral fraction there (1.4e-10 at T_r = 9000 K, 1.4e-8 at 7000 K,
 5e-7 at 6000 K, in Saha equilibrium). Helium's electrons are not in x_e: before z = 1800 they
-would raise k_D by about 0.5 per cent. Tight coupling, on which k_D rests, is taken to hold up to z_*, as in the
-references, although it ceases there.
+would raise k_D by about 0.5 per cent. Tight coupling, on which k_D rests, is taken to hold up to
+z_*, as in the references, although it ceases there.
 
 Every observable is a functional of ln(sigma_T n_e), ln H and ln R; its change is kept as weights on
 these three at the points of the quadrature, from which all derivatives follow.
