@@ -38,7 +38,9 @@ def difference(run: Setup, selector: str) -> float:
     """D ln x_e(900)/d ln(rate) from whole runs, error of fourth order in 2 and 4 per cent."""
 
     def slope(h: float) -> float:
-        low, high = (log_x(run, f"{selector},{float(np.exp(s * h))!r},,benchmark") for s in (-1.0, 1.0))
+        low, high = (
+            log_x(run, f"{selector},{float(np.exp(s * h))!r},,benchmark") for s in (-1.0, 1.0)
+        )
         return (high - low) / (2.0 * h)
 
     return (4.0 * slope(0.02) - slope(0.04)) / 3.0

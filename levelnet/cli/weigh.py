@@ -164,10 +164,12 @@ def _weighed(
     console: Console,
 ) -> Weighing:
     """Weigh all targets; the first `n_asked` were asked for, the rest is the budget's band."""
-    from ..studies.budget import error_budget, load_uncertainties
+    from ..studies.budget import error_budget, uncertainties_in
     from ..studies.weigh import weigh
 
-    uncertainties = () if options.no_budget else load_uncertainties(options.uncertainties)
+    uncertainties = (
+        () if options.no_budget else uncertainties_in(setup.atom_size, options.uncertainties)
+    )
     announce_cost(setup, console, _HISTORIES)
     pieces = None if options.no_cache else cache_pieces(console)
     with console.progress() as progress:

@@ -133,7 +133,14 @@ class Setup:
                 f"lines.lyman_lines = {count!r}: only levels resolved in l can have open Lyman "
                 f"lines: with hydrogen.resolve_l_to = {top} give a number from 1 to {top - 1}"
             )
-        self.rates.check(AtomSize(n_max, top, n_max - 1 if isinstance(count, str) else count))
+        self.rates.check(self.atom_size)
+
+    @property
+    def atom_size(self) -> AtomSize:
+        """What selectors of rates must find their match in."""
+        count, n_max = self.lines.lyman_lines, self.hydrogen.n_max
+        lines = n_max - 1 if isinstance(count, str) else count
+        return AtomSize(n_max, self.hydrogen.highest_resolved, lines)
 
     @property
     def two_photon_rate_per_s(self) -> float:

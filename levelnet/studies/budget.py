@@ -19,7 +19,7 @@ import numpy as np
 import atomic_tables
 
 from ..arrays import FloatArray, frozen_array
-from ..atomic.selection import Selector, level_mask, line_mask, pair_mask
+from ..atomic.selection import AtomSize, Selector, level_mask, line_mask, pair_mask
 from ..atomic.selector_rows import (
     SELECTOR_COLUMNS,
     SelectorRow,
@@ -172,6 +172,29 @@ def _uncertainty(row: SelectorRow) -> Uncertainty:
         raise InputError(f"{row.where}: source is empty; say where the number comes from")
     group, source = row.cells["group"], row.cells["source"]
     return Uncertainty(row.where, row.number, row.selector, sigma, group, source)
+
+
+def uncertainties_in(atom: AtomSize, path: str | Path | None = None) -> tuple[Uncertainty, ...]:
+    """Load the uncertainties of an atom before it is weighed.
+
+    Parameters
+    ----------
+    atom : AtomSize
+        As ``setup.atom_size``.
+    path : str or Path, optional
+        A file of one's own: InputError where a row selects nothing in the atom. None: the rows of
+        the default table that do.
+    """
+    rows = load_uncertainties(path)
+    found = tuple(one for one in rows if one.selector.exists_in(atom))
+    for one in rows:
+        if path is not None and one not in found:
+            raise InputError(
+                f'{one.where}: selector "{one.selector.text}" matches nothing in hydrogen with '
+                f"n_max = {atom.n_max}, resolve_l_to = {atom.resolve_l_to} and "
+                f"lyman_lines = {atom.lyman_lines}"
+            )
+    return found
 
 
 def error_budget(weighing: Weighing, uncertainties: Sequence[Uncertainty]) -> ErrorBudget:

@@ -15,6 +15,7 @@ from typing import NamedTuple
 import numpy as np
 
 from ..arrays import FloatArray
+from ..atomic.levels import level_name
 from ..background.parameters import COSMOLOGICAL, helium_mass_fraction
 from ..errors import InputError, Outcome
 from ..history.cost import check_memory
@@ -104,12 +105,13 @@ def weigh(
         raise InputError("targets: name at least one, such as x_e(900)")
     check_memory(setup)
     with one_blas_thread():
+        _check_levels(setup, parsed)
         history = freeze(setup, *reach(setup, parsed), tell, pieces)
         scalars = scalars_of(history, parsed)
         for target, value in zip(parsed, scalars.value.tolist(), strict=True):
             if not np.isfinite(value) or value == 0.0:
                 raise InputError(f"target {target.name}: the history does not reach it")
-        return _assemble(history, parsed, scalars, tell)
+        return _assemble(setup, history, parsed, scalars, tell)
 
 
 def reach(
@@ -123,8 +125,29 @@ def reach(
     return redshifts, tuple(sorted(keeps - {(1, 0)})), ionized if integral else 0.0
 
 
+def _check_levels(setup: Setup, targets: Sequence[Target]) -> None:
+    """Raise InputError for a line whose levels the atom has not, or whose photons stay."""
+    top, lyman = setup.hydrogen.highest_resolved, setup.atom_size.lyman_lines
+    for target in targets:
+        if target.kind != "line":
+            continue
+        if target.upper[0] > top:
+            raise InputError(
+                f"target {target.name}: the atom has levels resolved in l up to n = {top} only"
+            )
+        if target.lower == (1, 0) and target.upper[1] == 1 and target.upper[0] > lyman + 1:
+            raise InputError(
+                f"target {target.name}: that line is closed; lines.lyman_lines = {lyman} opens "
+                f"those up to {level_name(lyman + 1, 1)}-1s"
+            )
+
+
 def _assemble(
-    history: FrozenHistory, targets: Sequence[Target], scalars: Scalars, tell: Progress
+    setup: Setup,
+    history: FrozenHistory,
+    targets: Sequence[Target],
+    scalars: Scalars,
+    tell: Progress,
 ) -> Weighing:
     ladder = history.integrated.ladder
     weight, _ = adjoint(history.solution, scalars.by_state)
@@ -135,7 +158,7 @@ def _assemble(
     value = scalars.value
     parameter = direct.parameter * _parameter_values(history) / value[:, None]
     return Weighing(
-        history.setup,
+        setup,
         Outcome.CONVERGED,
         tuple(t.name for t in targets),
         tuple(t.unit for t in targets),

@@ -10,6 +10,7 @@ import pytest
 
 import atomic_tables
 from levelnet.atomic.levels import hydrogenic_levels
+from levelnet.atomic.selection import AtomSize
 from levelnet.errors import InputError, Outcome, TableError
 from levelnet.studies import budget as room
 from levelnet.studies.budget import (
@@ -17,6 +18,7 @@ from levelnet.studies.budget import (
     derivatives,
     error_budget,
     load_uncertainties,
+    uncertainties_in,
 )
 from levelnet.studies.weighing import Weighing
 from levelnet.tables import read_table
@@ -237,3 +239,13 @@ def test_a_selector_that_matches_nothing_is_refused(table, selector: str) -> Non
 def test_no_rows_are_refused() -> None:
     with pytest.raises(InputError, match="uncertainties: empty"):
         error_budget(WEIGHED, ())
+
+
+def test_rows_that_an_atom_has_not(tmp_path: Path) -> None:
+    small = AtomSize(2, 2, 1)
+    kept = {one.selector.process for one in uncertainties_in(small)}
+    assert "bound_bound" not in kept and {"bound_free", "two_photon", "escape"} <= kept
+    path = tmp_path / "mine.csv"
+    path.write_text("process,upper,lower,sigma,group,source\nbound_bound,3d,2p,0.1,,test\n")
+    with pytest.raises(InputError, match=r"row 1: selector .* matches nothing in hydrogen"):
+        uncertainties_in(small, path)

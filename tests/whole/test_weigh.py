@@ -10,6 +10,8 @@ from typing import Any
 import numpy as np
 import pytest
 
+from levelnet.errors import InputError, SolveError
+from levelnet.history.run import solve
 from levelnet.network.weights import transitions
 from levelnet.studies.weigh import weigh
 from levelnet.studies.weighing import Weighing
@@ -145,3 +147,49 @@ def test_forty_rates_and_groups_of_the_rest(end: float, count: int) -> None:
         computed = ours.bound_bound[:, group].sum(axis=1)
         for at, name in enumerate(TARGETS):
             assert computed[at] == pytest.approx(difference[at], rel=1e-6, abs=NOISE[name])
+
+
+def test_whole_shells_weigh_what_their_levels_weigh_together() -> None:
+    # With populations statistical by a network of whole shells, the sum over all rates is the same
+    # kind of number: here it is held by a common factor on every line, in whole runs.
+    setup = small_setup(hydrogen={"n_max": 12, "resolve_l_to": 6}, accuracy={"relative": 1e-9})
+    name = "x_e(900)"
+    grid = dataclasses.replace(setup.grid, redshifts=(1800.0, 900.0, 20.0))
+    setup = dataclasses.replace(setup, grid=grid)
+    ours = weigh(setup, [name])
+
+    def log_x(row: str) -> float:
+        found = solve(dataclasses.replace(setup, rates={"rows": (row,)}))
+        return math.log(float(found.free_electron_fraction[1]))
+
+    for process, selector in (("bound_bound", "bound_bound,*,*"), ("bound_free", "bound_free,*,")):
+        step = 0.01
+        rows = [f"{selector},{math.exp(h)!r},,test" for h in (-step, step)]
+        difference = (log_x(rows[1]) - log_x(rows[0])) / (2.0 * step)
+        assert ours.processes(name)[process] == pytest.approx(difference, rel=2e-5), process
+    assert ours.levels.shell.sum() == 6
+    assert ours.bound_free[0, ours.levels.shell].all()
+
+
+@pytest.mark.parametrize(
+    ("target", "complaint"),
+    [
+        ("line(9d-2p)", "resolved in l up to n = 4"),
+        ("line(3p-1s)", "that line is closed"),
+        ("x_e(10)", "below grid.redshift_end"),
+        ("optical_depth(5)", "does not reach it"),
+        ("nonsense", "not known"),
+    ],
+)
+def test_targets_that_cannot_be(target: str, complaint: str) -> None:
+    with pytest.raises(InputError, match=complaint):
+        weigh(small_setup(4), [target])
+
+
+def test_what_cannot_be_weighed() -> None:
+    with pytest.raises(InputError, match="name at least one"):
+        weigh(small_setup(4), [])
+    with pytest.raises(InputError, match="interpolate"):
+        weigh(small_setup(4, accuracy={"interpolate": False}), ["z_*"])
+    with pytest.raises(SolveError):
+        weigh(small_setup(4, accuracy={"max_steps": 10}), ["z_*"])
