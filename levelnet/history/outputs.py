@@ -110,18 +110,25 @@ def state_at(integrated: Integrated, log_scale: float) -> FloatArray:
 
 
 def _outputs(integrated: Integrated, redshift: FloatArray, tell: Progress) -> list[_Output]:
-    equations, work = integrated.equations, Workspace.of(integrated.ladder)
+    work = Workspace.of(integrated.ladder)
     found = []
     for k, z in enumerate(redshift.tolist()):
-        log_scale = -math.log1p(z)
-        local = equations.local(log_scale, state_at(integrated, log_scale))
-        measured = _as_measured(local.conditions, equations.scales)
-        factored = factor_interior(integrated.ladder, measured.radiation_temperature_k, work)
-        levels = populations(factored, local.solution.log_population, measured)
+        local, factored, levels = solve_levels(integrated, z, work)
         relaxation = local.solution.slowest_relaxation() / local.conditions.hubble_rate_per_s
         found.append(_Output(local, levels, _lost_per_s(factored), relaxation))
         tell("level populations", (k + 1) / len(redshift))
     return found
+
+
+def solve_levels(
+    integrated: Integrated, redshift: float, work: Workspace
+) -> tuple[Local, FactoredInterior, LevelPopulations]:
+    """Kept levels, factored interior and populations of every level at one output redshift."""
+    equations, log_scale = integrated.equations, -math.log1p(redshift)
+    local = equations.local(log_scale, state_at(integrated, log_scale))
+    measured = _as_measured(local.conditions, equations.scales)
+    factored = factor_interior(integrated.ladder, measured.radiation_temperature_k, work)
+    return local, factored, populations(factored, local.solution.log_population, measured)
 
 
 def _as_measured(conditions: Conditions, factor: Scales) -> Conditions:
@@ -133,8 +140,10 @@ def _as_measured(conditions: Conditions, factor: Scales) -> Conditions:
     )
 
 
-def _visibility(integrated: Integrated, redshift: FloatArray) -> Visibility:
-    """Optical depth and visibility on a dense grid over the whole range."""
+def dense_electrons(
+    integrated: Integrated, redshift: FloatArray
+) -> tuple[FloatArray, FloatArray]:
+    """ln(1 + z), ascending and dense, over the whole range of the run, and n_e/n_H there."""
     handover = math.log1p(integrated.handover.redshift)
     low = float(np.log1p(redshift[-1]))
     log_growth = dense_growth(low, max(handover, float(np.log1p(redshift[0]))))
@@ -146,7 +155,12 @@ def _visibility(integrated: Integrated, redshift: FloatArray) -> Visibility:
         log_odds[below] = curve(-log_growth[below])
     for k in np.flatnonzero(~below):
         log_odds[k] = equilibrium_state(integrated.equations, -log_growth[k])[0][0]
-    electrons = np.array([ionized_and_neutral(u)[0] for u in log_odds.tolist()])
+    return log_growth, np.array([ionized_and_neutral(u)[0] for u in log_odds.tolist()])
+
+
+def _visibility(integrated: Integrated, redshift: FloatArray) -> Visibility:
+    """Optical depth and visibility on a dense grid over the whole range."""
+    log_growth, electrons = dense_electrons(integrated, redshift)
     equations = integrated.equations
     return visibility(equations.cosmology, log_growth, electrons, equations.scales.thomson)
 
