@@ -19,8 +19,8 @@ if TYPE_CHECKING:
 NAME = "show"
 SUMMARY = "sum up a result file; draw figures, write a table"
 DESCRIPTION = (
-    "Print the summary of a result file, a table of effective rates or a history made from one; "
-    "write its figures or its table."
+    "Print the summary of a result file, a table of effective rates, a history made from one or a "
+    "study of levels; write its figures or its table."
 )
 EXAMPLE = "levelnet show result.h5 --plot figures"
 
@@ -77,9 +77,12 @@ def run(options: argparse.Namespace, console: Console) -> int:
 
     from ..history.result import History
     from ..store import read
-    from .show_table import show_distilled
+    from ..studies.level_records import LevelStudy
+    from .show_table import show_distilled, show_levels
 
     history = read(options.file)
+    if isinstance(history, LevelStudy):
+        return show_levels(history, folder, options, console)
     if not isinstance(history, History):
         return show_distilled(history, folder, options, console)
     if options.export:

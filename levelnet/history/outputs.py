@@ -140,9 +140,7 @@ def _as_measured(conditions: Conditions, factor: Scales) -> Conditions:
     )
 
 
-def dense_electrons(
-    integrated: Integrated, redshift: FloatArray
-) -> tuple[FloatArray, FloatArray]:
+def dense_electrons(integrated: Integrated, redshift: FloatArray) -> tuple[FloatArray, FloatArray]:
     """ln(1 + z), ascending and dense, over the whole range of the run, and n_e/n_H there."""
     handover = math.log1p(integrated.handover.redshift)
     low = float(np.log1p(redshift[-1]))

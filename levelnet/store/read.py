@@ -22,18 +22,22 @@ from ..history.setup import parse_setup
 from . import layout
 from .digest import content_digest, seal_fault
 from .hdf5 import Damage, load
+from .level_layout import LEVEL_LAYOUT
 from .schema import Content, Group, Layout
 from .table_layout import DISTILLED_LAYOUT, TABLE_LAYOUT
 
 if TYPE_CHECKING:
     from ..distilled.history import FastHistory
     from ..distilled.table import EffectiveTable
+    from ..studies.level_records import LevelStudy
+
+    Record = History | EffectiveTable | FastHistory | LevelStudy
 
 _HDF5_SIGNATURE = b"\x89HDF\r\n\x1a\n"
 
 
-def read(path: str | Path) -> History | EffectiveTable | FastHistory:
-    """Read a history, a table of effective rates, or a history made from one.
+def read(path: str | Path) -> Record:
+    """Read a history, a table of effective rates, a history made from one, or a study.
 
     Parameters
     ----------
@@ -42,7 +46,7 @@ def read(path: str | Path) -> History | EffectiveTable | FastHistory:
 
     Returns
     -------
-    History, EffectiveTable or FastHistory
+    History, EffectiveTable, FastHistory or LevelStudy
         Equal to what was written, to the bit.
 
     Raises
@@ -53,7 +57,7 @@ def read(path: str | Path) -> History | EffectiveTable | FastHistory:
     return _record(path, read_content(path))
 
 
-def _record(path: str | Path, content: Content) -> History | EffectiveTable | FastHistory:
+def _record(path: str | Path, content: Content) -> Record:
     kind, make = _MAKERS[str(content.attributes["layout"])]
     try:
         return make(content)
@@ -194,6 +198,27 @@ def table_of(content: Content) -> EffectiveTable:
     )
 
 
+def level_study_of(content: Content) -> LevelStudy:
+    """Make the study that :func:`levelnet.store.write.content_of` took apart."""
+    from ..studies.level_records import Estimate, Estimates, HeldOut, LevelStudy, Noise, Rungs
+
+    def estimates(given: dict[str, Any]) -> Estimates:
+        return Estimates(**{name: Estimate(**one) for name, one in given.items()})
+
+    parts = _all_fields(content, LEVEL_LAYOUT)
+    held, resolved = parts.pop("held_out", None), parts.pop("resolved", None)
+    return LevelStudy(
+        setup=parse_setup(str(content.attributes["setup"]), "stored setup"),
+        outcome=_outcome(content),
+        rungs=Rungs(**parts.pop("rungs")),
+        limit=estimates(parts.pop("limit")),
+        noise=Noise(**parts.pop("noise")),
+        held_out=None if held is None else HeldOut(held["n_max"], estimates(held["foreseen"])),
+        resolved=None if resolved is None else Rungs(**resolved),
+        **parts,
+    )
+
+
 def _fields(content: Content, group: Group) -> dict[str, Any]:
     """Collect the fields of the records in one group: {"channels": {"names": ..., ...}, ...}."""
     fields: dict[str, Any] = {}
@@ -215,8 +240,9 @@ def _same_redshift(content: Content, stored: Any) -> bool:
     return bool(stored.tobytes() == redshift.tobytes())
 
 
-_MAKERS: dict[str, tuple[Layout, Callable[[Content], History | EffectiveTable | FastHistory]]] = {
+_MAKERS: dict[str, tuple[Layout, Callable[[Content], Record]]] = {
     layout.LAYOUT_NAME: (layout.HISTORY_LAYOUT, history_of),
     TABLE_LAYOUT.name: (TABLE_LAYOUT, table_of),
     DISTILLED_LAYOUT.name: (DISTILLED_LAYOUT, distilled_of),
+    LEVEL_LAYOUT.name: (LEVEL_LAYOUT, level_study_of),
 }

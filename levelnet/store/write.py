@@ -17,6 +17,7 @@ from ..history.result import History, SpeciesPopulations
 from ..history.setup import Setup
 from . import layout
 from .digest import content_digest, seal
+from .level_layout import LEVEL_LAYOUT
 from .provenance import provenance
 from .schema import Content, Group, Layout, Stored, Variable, number_type
 from .table_layout import DISTILLED_LAYOUT, TABLE_LAYOUT
@@ -27,22 +28,25 @@ if TYPE_CHECKING:
 
     from ..distilled.history import FastHistory
     from ..distilled.table import EffectiveTable
+    from ..studies.level_records import LevelStudy
 
-    Record = History | EffectiveTable | FastHistory
+    Record = History | EffectiveTable | FastHistory | LevelStudy
 
 # Chunks of at most 64 redshifts x 2048 levels (1 MiB), the size of HDF5's chunk cache.
 _CHUNK = (64, 2048)
 _CHUNK_ONE_DIMENSION = 16384
 
 
-def write(result: History | EffectiveTable, path: str | Path, force: bool = False) -> None:
-    """Write a history, or a table of effective rates, to an HDF5 file.
+def write(
+    result: History | EffectiveTable | LevelStudy, path: str | Path, force: bool = False
+) -> None:
+    """Write a history, a table of effective rates or a study of levels to an HDF5 file.
 
     Parameters
     ----------
-    result : History or EffectiveTable
-        What to store, in the layout of :mod:`levelnet.store.layout` or
-        :mod:`levelnet.store.table_layout`.
+    result : History, EffectiveTable or LevelStudy
+        What to store, in the layout of :mod:`levelnet.store.layout`,
+        :mod:`levelnet.store.table_layout` or :mod:`levelnet.store.level_layout`.
     path : str or Path
         The file; it appears whole or not at all.
     force : bool
@@ -91,17 +95,21 @@ def write_distilled(
         seal(raw)
 
 
-def content_of(result: History | EffectiveTable) -> Content:
+def content_of(result: History | EffectiveTable | LevelStudy) -> Content:
     """Everything a file says about a record, with the digest over all of it."""
     from ..distilled.table import EffectiveTable
+    from ..studies.level_records import LevelStudy
 
     if isinstance(result, History):
         content = _history_content(result)
     elif isinstance(result, EffectiveTable):
         content = _table_content(result)
+    elif isinstance(result, LevelStudy):
+        content = _study_content(result)
     else:
         raise InputError(
-            f"write: a {type(result).__name__} cannot be stored; a History or EffectiveTable can"
+            f"write: a {type(result).__name__} cannot be stored; a History, an EffectiveTable or "
+            "a study can"
         )
     content.attributes["digest"] = content_digest(content)
     return content
@@ -125,6 +133,15 @@ def _table_content(table: EffectiveTable) -> Content:
     optional = () if table.certificate is None else TABLE_LAYOUT.optional
     for group in (*TABLE_LAYOUT.required, *optional):
         _add_group(content, group, table, None)
+    return content
+
+
+def _study_content(study: LevelStudy) -> Content:
+    content = Content(attributes=_root_attributes(LEVEL_LAYOUT, study.setup))
+    _add_outcome(content, study.outcome)
+    there = [one for one in LEVEL_LAYOUT.optional if getattr(study, one.name) is not None]
+    for group in (*LEVEL_LAYOUT.required, *there):
+        _add_group(content, group, study, None)
     return content
 
 

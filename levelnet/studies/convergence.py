@@ -33,8 +33,8 @@ _TERMS = ((0, 0), (2, 1), (2, 0), (4, 1), (4, 0))
 # that the rungs could tell.
 _LOWEST_EXPONENT, _HIGHEST_EXPONENT = 0.1, 12.0
 # Error bar over the largest difference among the laws. With few rungs the laws are few and may err
-# alike; over the ladders of ``python -m benchmarks.levels`` errors then stay below 0.9 of the bar.
-_DOUBT_OF_FEW, _DOUBT = 3.0, 1.5
+# alike. Over the ladders of ``python -m benchmarks.levels`` errors stay below 0.75 of the bar.
+_DOUBT_OF_FEW, _DOUBT = 4.0, 1.5
 # How many times longer than the longest rung an n_max may be that is still named.
 _FURTHEST = 10
 # Differences between rungs must exceed their noise by this factor before a law is fitted to them.
@@ -102,7 +102,7 @@ def carry(
     Kramers 1923, Phil. Mag. 46, 836 (cross sections; from memory).
     """
     check_rung_count(len(n_max))
-    rungs = np.asarray(n_max) + 0.5
+    rungs: FloatArray = n_max.astype(np.float64) + 0.5
     n_terms = min(len(_TERMS), len(rungs) - 1)
     best, amplified = _shell_law(rungs, logarithms, n_terms, to + 0.5)
     others = [_shell_law(rungs[:-1], logarithms[:-1], n_terms, to + 0.5)[0]]
@@ -264,7 +264,8 @@ def _power_law(
         ratio = (logarithms[-2] - logarithms[-3]) / step
 
     def ratio_of(p: FloatArray) -> FloatArray:
-        return np.expm1(p * np.log(second / first)) / -np.expm1(-p * np.log(third / second))
+        before, after = p * np.log(second / first), p * np.log(third / second)
+        return np.asarray(np.expm1(before) / -np.expm1(-after))
 
     low = np.full(len(ratio), _LOWEST_EXPONENT)
     high = np.full(len(ratio), _HIGHEST_EXPONENT)

@@ -119,8 +119,9 @@ class HeldOut:
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Noise:
-    """Numerical errors, measured by computing the two shortest rungs a second time, ten times less
-    accurately: upper bounds of the relative errors of the study.
+    """Upper bounds of the relative numerical errors of a study.
+
+    They are measured: the two shortest rungs are computed again, ten times less accurately.
 
     Attributes
     ----------

@@ -236,7 +236,7 @@ def _noise(fine: list[RungResult], coarse: list[RungResult]) -> Noise:
 def _envelope(values: FloatArray) -> FloatArray:
     """Largest among close neighbours: errors change sign, and must not count as none there."""
     padded = np.pad(values, 2, mode="edge")
-    return np.max([padded[k : k + len(values)] for k in range(5)], axis=0)
+    return np.asarray(np.max([padded[k : k + len(values)] for k in range(5)], axis=0))
 
 
 def carry_all(rungs: Rungs, noise: Noise, to: float = np.inf) -> Estimates:
@@ -249,14 +249,17 @@ def carry_all(rungs: Rungs, noise: Noise, to: float = np.inf) -> Estimates:
     return Estimates(*(one(field.name) for field in dataclasses.fields(Estimates)))
 
 
+def n_held_out(n_rungs: int) -> int:
+    """How many of so many rungs are held out of the check fit: two, if five or more are left."""
+    return max(0, min(_MOST_HELD_OUT, n_rungs - FEWEST_RUNGS - 1))
+
+
 def hold_out(rungs: Rungs, noise: Noise) -> HeldOut | None:
     """Foresee the longest rungs, two at most, from at least five shorter ones."""
-    count = min(_MOST_HELD_OUT, len(rungs.n_max) - FEWEST_RUNGS - 1)
-    if count < 1:
+    count = n_held_out(len(rungs.n_max))
+    if not count:
         return None
-    shorter = Rungs(
-        *(getattr(rungs, field.name)[:-count] for field in dataclasses.fields(Rungs))
-    )
+    shorter = Rungs(*(getattr(rungs, field.name)[:-count] for field in dataclasses.fields(Rungs)))
     held = rungs.n_max[-count:]
     foreseen = [carry_all(shorter, noise, float(n)) for n in held.tolist()]
 

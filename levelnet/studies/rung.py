@@ -57,13 +57,12 @@ class RungResult(NamedTuple):
 
 def rung_setup(setup: Setup, n_max: int, resolve_l_to: int | None, relative: float) -> Setup:
     """The setup of one rung; `resolve_l_to` of None leaves the setup's own choice."""
-    changes: dict[str, int] = {"n_max": n_max}
-    own = getattr(setup.hydrogen, "resolve_l_to", None)
-    if resolve_l_to is not None or own is not None:
-        changes["resolve_l_to"] = min(n_max, own if resolve_l_to is None else resolve_l_to)
+    hydrogen = setup.hydrogen
+    top = hydrogen.resolve_l_to if resolve_l_to is None else resolve_l_to
+    top = None if top is None else min(n_max, top)
     return dataclasses.replace(
         setup,
-        hydrogen=dataclasses.replace(setup.hydrogen, **changes),
+        hydrogen=dataclasses.replace(hydrogen, n_max=n_max, resolve_l_to=top),
         accuracy=dataclasses.replace(setup.accuracy, relative=relative),
     )
 

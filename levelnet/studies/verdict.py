@@ -6,11 +6,14 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from ..arrays import FloatArray
+from ..arrays import FloatArray, IntArray
 from ..errors import InputError
 from ..history.cost import HIGHEST_N
 from .convergence import smallest_n_max, truncation_error
 from .level_records import LevelStudy
+
+# Below it numerical errors count.
+_LEAST = 1e-8
 
 
 @dataclass(frozen=True, slots=True)
@@ -51,7 +54,7 @@ def verdict(study: LevelStudy, within: float, low: float, high: float) -> Verdic
     ----------
     study : LevelStudy
         The ladder.
-    within : float, above 1e-9 to 1 (dimensionless)
+    within : float, above 1e-8 to 1 (dimensionless)
         Relative error allowed in x_e: truncation alone.
     low, high : float, dimensionless
         Redshifts, ends included.
@@ -61,11 +64,11 @@ def verdict(study: LevelStudy, within: float, low: float, high: float) -> Verdic
     InputError
         If `within` is out of range or no output lies in the range of redshift.
     """
-    inside, allowed = asked(study, within, low, high)
+    inside = outputs_between(study.redshift, within, low, high)
     rungs = study.rungs
     logs = np.log(rungs.free_electron_fraction[:, inside])
     noise = study.noise.free_electron_fraction[inside]
-    found = smallest_n_max(rungs.n_max, logs, noise, allowed)
+    found = smallest_n_max(rungs.n_max, logs, noise, np.full(len(inside), within))
     return Verdict(
         within,
         low,
@@ -79,7 +82,7 @@ def verdict(study: LevelStudy, within: float, low: float, high: float) -> Verdic
 
 def rung_errors(study: LevelStudy, low: float, high: float) -> FloatArray:
     """Largest truncation error of x_e, its bar included, of each rung between two redshifts."""
-    inside, _ = asked(study, 1.0, low, high)
+    inside = outputs_between(study.redshift, 1.0, low, high)
     rungs = study.rungs
     logs = np.log(rungs.free_electron_fraction[:, inside])
     noise = study.noise.free_electron_fraction[inside]
@@ -87,21 +90,19 @@ def rung_errors(study: LevelStudy, low: float, high: float) -> FloatArray:
     return np.array([np.max(np.abs(error) + bar) for error, bar in pairs])
 
 
-def asked(
-    study: LevelStudy, within: float, low: float, high: float
-) -> tuple[FloatArray, FloatArray]:
-    """Outputs between two redshifts, and the error allowed at each."""
-    if not 1e-9 < within <= 1.0:
-        raise InputError(f"within = {within:g}: allowed are values above 1e-9 up to 1")
+def outputs_between(redshift: FloatArray, within: float, low: float, high: float) -> IntArray:
+    """Which outputs lie between two redshifts; InputError where the question makes no sense."""
+    if not _LEAST < within <= 1.0:
+        raise InputError(f"within = {within:g}: allowed are values above {_LEAST:g} up to 1")
     if not low <= high:
-        raise InputError(f"between = {low:g} {high:g}: the lower redshift comes first")
-    inside = np.flatnonzero((study.redshift >= low) & (study.redshift <= high))
+        raise InputError(f"between = {low:g}, {high:g}: the lower redshift comes first")
+    inside = np.flatnonzero((redshift >= low) & (redshift <= high))
     if not len(inside):
         raise InputError(
-            f"between = {low:g} {high:g}: no output redshift of the setup lies there "
-            f"({study.redshift[-1]:g} to {study.redshift[0]:g})"
+            f"between = {low:g}, {high:g}: no output redshift of the setup lies there "
+            f"(they run from {redshift[-1]:g} to {redshift[0]:g})"
         )
-    return inside, np.full(len(inside), within)
+    return inside
 
 
 def verdict_text(found: Verdict, longest: int) -> str:
