@@ -30,6 +30,8 @@ if TYPE_CHECKING:
     from .history.setup import Setup, load_setup
     from .store.read import read
     from .store.write import write
+    from .studies.level_records import LevelStudy
+    from .studies.levels import level_study
     from .studies.weigh import weigh
     from .studies.weighing import Weighing
 
@@ -44,6 +46,7 @@ _HOMES = {
     "FastHistory": "distilled.history",
     "History": "history.result",
     "InputError": "errors",
+    "LevelStudy": "studies.level_records",
     "LevelnetError": "errors",
     "LocalRates": "distilled.local",
     "Outcome": "errors",
@@ -57,6 +60,7 @@ _HOMES = {
     "escape_probability": "escape.sobolev",
     "from_astropy": "background",
     "history_from_table": "distilled.history",
+    "level_study": "studies.levels",
     "load_setup": "history.setup",
     "photoionization_cross_section": "atomic.bound_free",
     "photoionization_rate": "atomic.bound_free",
@@ -80,6 +84,7 @@ __all__ = [
     "FastHistory",
     "History",
     "InputError",
+    "LevelStudy",
     "LevelnetError",
     "LocalRates",
     "Outcome",
@@ -94,6 +99,7 @@ __all__ = [
     "escape_probability",
     "from_astropy",
     "history_from_table",
+    "level_study",
     "load_setup",
     "photoionization_cross_section",
     "photoionization_rate",

@@ -58,6 +58,8 @@ UNITS = {
 """Unit of each observable; "1" where there is none, Mpc comoving."""
 OBSERVABLES = tuple(UNITS)
 """Names of the observables, besides optical_depth(Z)."""
+IONIZED_K = 7000.0
+"""T_r in K from which integrals over a history may start: 1.4e-8 of hydrogen is neutral there."""
 
 
 @dataclass(frozen=True, slots=True, eq=False)

@@ -96,7 +96,7 @@ def run(options: argparse.Namespace, console: Console) -> int:
     from ..store import write
 
     start = time.monotonic()
-    with console.progress() as progress, _processes(options.workers) as executor:
+    with console.progress() as progress, worker_processes(options.workers) as executor:
         table = distill(
             setup,
             kept=kept,
@@ -155,7 +155,7 @@ def kept_levels(text: str) -> tuple[tuple[int, int], ...]:
 
 
 @contextmanager
-def _processes(workers: int | None) -> Iterator[Executor | None]:
+def worker_processes(workers: int | None) -> Iterator[Executor | None]:
     """Worker processes; None where one process is enough."""
     count = len(os.sched_getaffinity(0)) if hasattr(os, "sched_getaffinity") else os.cpu_count()
     count = (count or 1) if workers is None else workers

@@ -15,7 +15,7 @@ from typing import NoReturn
 
 from .. import __version__
 from ..errors import InputError, LevelnetError
-from . import demo, distill, history, show, solve, tables, weigh
+from . import demo, distill, history, levels, show, solve, tables, weigh
 from .console import Console, one_line
 
 # Input was good, but the disk was not: a failure and no bad input.
@@ -31,6 +31,7 @@ Ionization history and level populations of hydrogen through cosmological recomb
   levelnet weigh setup.toml          weigh every rate: what each does to x_e(z)
   levelnet distill setup.toml        distil its atom to effective rates, write setup-table.h5
   levelnet history setup-table.h5    make a history from them in milliseconds
+  levelnet levels setup.toml         find out how many levels matter
 """
 _EXIT_CODES = (
     "exit codes: 0 ok; 1 computed but not to the tolerance, or failed; 2 bad usage or input; "
@@ -57,7 +58,7 @@ def build_parser() -> argparse.ArgumentParser:
     )
     parser.add_argument("--version", action="version", version=f"levelnet {__version__}")
     commands = parser.add_subparsers(metavar="COMMAND", parser_class=_Parser)
-    for module in (solve, show, weigh, distill, history, tables, demo):
+    for module in (solve, show, levels, weigh, distill, history, tables, demo):
         command = commands.add_parser(
             module.NAME,
             help=module.SUMMARY,

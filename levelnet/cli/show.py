@@ -20,7 +20,7 @@ NAME = "show"
 SUMMARY = "sum up a result file; draw figures, write a table"
 DESCRIPTION = (
     "Print the summary of a result file, a table of effective rates, a history made from one or a "
-    "weighing; write its figures or its table."
+    "weighing or a study of levels; write its figures or its table."
 )
 EXAMPLE = "levelnet show result.h5 --plot figures"
 
@@ -77,13 +77,16 @@ def run(options: argparse.Namespace, console: Console) -> int:
 
     from ..history.result import History
     from ..store import read
+    from ..studies.level_records import LevelStudy
     from ..studies.weighing import Weighing
-    from .show_table import show_distilled
+    from .show_table import show_distilled, show_levels
     from .show_weighing import show_weighing
 
     history = read(options.file)
     if isinstance(history, Weighing):
         return show_weighing(history, folder, options, console)
+    if isinstance(history, LevelStudy):
+        return show_levels(history, folder, options, console)
     if not isinstance(history, History):
         return show_distilled(history, folder, options, console)
     if options.export:

@@ -1,4 +1,4 @@
-"""``levelnet show`` for a table of effective rates and for a history made from one."""
+"""``levelnet show`` for tables of effective rates, histories made from them, and studies."""
 
 from __future__ import annotations
 
@@ -9,12 +9,33 @@ from typing import TYPE_CHECKING
 from ..errors import InputError
 from .console import Console
 from .distill import check_exports, write_exports
+from .level_output import level_summary, level_values
+from .levels import judged, save_figures
 from .output import print_json
 from .table_output import distilled_summary, distilled_values, table_summary, table_values
 
 if TYPE_CHECKING:
     from ..distilled.history import FastHistory
     from ..distilled.table import EffectiveTable
+    from ..studies.level_records import LevelStudy
+
+
+def show_levels(
+    study: LevelStudy, folder: Path | None, options: argparse.Namespace, console: Console
+) -> int:
+    """Print the summary of a study and draw it where that was asked for."""
+    if options.redshift is not None or options.csv is not None or options.export:
+        raise InputError("--redshift, --csv, --export: not for a study of levels")
+    written = save_figures(study, folder, options.force, console)
+    found = judged(study)
+    if options.json:
+        print_json({**level_values(study, found), "file": options.file, "written": written})
+        return 0
+    print(level_summary(study, found))
+    print(f"{'file':<22}{options.file}")
+    for path in written:
+        print(f"{'written':<22}{path}")
+    return 0
 
 
 def show_distilled(

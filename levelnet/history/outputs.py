@@ -120,18 +120,25 @@ def state_at(integrated: Integrated, log_scale: float) -> FloatArray:
 
 
 def _outputs(integrated: Integrated, redshift: FloatArray, tell: Progress) -> list[_Output]:
-    equations, work = integrated.equations, Workspace.of(integrated.ladder)
+    work = Workspace.of(integrated.ladder)
     found = []
     for k, z in enumerate(redshift.tolist()):
-        log_scale = -math.log1p(z)
-        local = equations.local(log_scale, state_at(integrated, log_scale))
-        measured = _as_measured(local.conditions, equations.scales)
-        factored = factor_interior(integrated.ladder, measured.radiation_temperature_k, work)
-        levels = populations(factored, local.solution.log_population, measured)
+        local, factored, levels = solve_levels(integrated, z, work)
         relaxation = local.solution.slowest_relaxation() / local.conditions.hubble_rate_per_s
         found.append(_Output(local, levels, _lost_per_s(factored), relaxation))
         tell("level populations", (k + 1) / len(redshift))
     return found
+
+
+def solve_levels(
+    integrated: Integrated, redshift: float, work: Workspace
+) -> tuple[Local, FactoredInterior, LevelPopulations]:
+    """Kept levels, factored interior and populations of every level at one output redshift."""
+    equations, log_scale = integrated.equations, -math.log1p(redshift)
+    local = equations.local(log_scale, state_at(integrated, log_scale))
+    measured = _as_measured(local.conditions, equations.scales)
+    factored = factor_interior(integrated.ladder, measured.radiation_temperature_k, work)
+    return local, factored, populations(factored, local.solution.log_population, measured)
 
 
 def _as_measured(conditions: Conditions, factor: Scales) -> Conditions:
@@ -153,14 +160,14 @@ def _seen(
     start = max(integrated.handover.redshift, float(redshift[0]))
     if start > redshift[-1]:  # not where the run ended before anything happened
         grid = quadrature(cosmology, -math.log1p(start), -math.log1p(float(redshift[-1])))
-        electrons = _electron_fraction(integrated, grid.points)
+        electrons = electron_fraction_at(integrated, grid.points)
         depth = optical_depth(cosmology, grid, electrons, redshift, thomson)
         marks = milestones(cosmology, grid, electrons, thomson)
     visibility = opacity_per_mpc(electrons_cm3, 1.0 + redshift, thomson) * np.exp(-depth)
     return depth, visibility, marks
 
 
-def _electron_fraction(integrated: Integrated, log_scale: FloatArray) -> FloatArray:
+def electron_fraction_at(integrated: Integrated, log_scale: FloatArray) -> FloatArray:
     """n_e/n_H (dimensionless) at any ln a of the history."""
     log_odds = np.empty(len(log_scale))
     below = log_scale > -math.log1p(integrated.handover.redshift)

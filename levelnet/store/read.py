@@ -22,6 +22,7 @@ from ..history.setup import parse_setup
 from . import layout
 from .digest import content_digest, seal_fault
 from .hdf5 import Damage, load
+from .level_layout import LEVEL_LAYOUT
 from .schema import Content, Group, Layout
 from .table_layout import DISTILLED_LAYOUT, TABLE_LAYOUT
 from .weighing_layout import WEIGHING_LAYOUT
@@ -29,15 +30,16 @@ from .weighing_layout import WEIGHING_LAYOUT
 if TYPE_CHECKING:
     from ..distilled.history import FastHistory
     from ..distilled.table import EffectiveTable
+    from ..studies.level_records import LevelStudy
     from ..studies.weighing import Weighing
 
-    Record = History | EffectiveTable | FastHistory | Weighing
+    Record = History | EffectiveTable | FastHistory | Weighing | LevelStudy
 
 _HDF5_SIGNATURE = b"\x89HDF\r\n\x1a\n"
 
 
 def read(path: str | Path) -> Record:
-    """Read a history, a table of effective rates, a history made from one, or a weighing.
+    """Read a history, a table of effective rates, a history made from one, or a study.
 
     Parameters
     ----------
@@ -46,7 +48,7 @@ def read(path: str | Path) -> Record:
 
     Returns
     -------
-    History, EffectiveTable, FastHistory or Weighing
+    History, EffectiveTable, FastHistory, Weighing or LevelStudy
         Equal to what was written, to the bit.
 
     Raises
@@ -218,6 +220,27 @@ def weighing_of(content: Content) -> Weighing:
     )
 
 
+def level_study_of(content: Content) -> LevelStudy:
+    """Make the study that :func:`levelnet.store.write.content_of` took apart."""
+    from ..studies.level_records import Estimate, Estimates, HeldOut, LevelStudy, Noise, Rungs
+
+    def estimates(given: dict[str, Any]) -> Estimates:
+        return Estimates(**{name: Estimate(**one) for name, one in given.items()})
+
+    parts = _all_fields(content, LEVEL_LAYOUT)
+    held, resolved = parts.pop("held_out", None), parts.pop("resolved", None)
+    return LevelStudy(
+        setup=parse_setup(str(content.attributes["setup"]), "stored setup"),
+        outcome=_outcome(content),
+        rungs=Rungs(**parts.pop("rungs")),
+        limit=estimates(parts.pop("limit")),
+        noise=Noise(**parts.pop("noise")),
+        held_out=None if held is None else HeldOut(held["n_max"], estimates(held["foreseen"])),
+        resolved=None if resolved is None else Rungs(**resolved),
+        **parts,
+    )
+
+
 def _fields(content: Content, group: Group) -> dict[str, Any]:
     """Collect the fields of the records in one group: {"channels": {"names": ..., ...}, ...}."""
     fields: dict[str, Any] = {}
@@ -244,4 +267,5 @@ _MAKERS: dict[str, tuple[Layout, Callable[[Content], Record]]] = {
     TABLE_LAYOUT.name: (TABLE_LAYOUT, table_of),
     DISTILLED_LAYOUT.name: (DISTILLED_LAYOUT, distilled_of),
     WEIGHING_LAYOUT.name: (WEIGHING_LAYOUT, weighing_of),
+    LEVEL_LAYOUT.name: (LEVEL_LAYOUT, level_study_of),
 }

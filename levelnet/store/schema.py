@@ -30,9 +30,9 @@ class Variable:
 
     @property
     def attributes(self) -> dict[str, str]:
-        """The attributes on disk. `units` is left out for text, which has none."""
+        """The attributes on disk; no `units` for text, nor where each number has its own."""
         given = {"long_name": self.long_name}
-        if self.kind != "text":
+        if self.units and self.kind != "text":
             given["units"] = self.units
         if self.coordinates:
             # Tells xarray that the quantum numbers are coordinates of the levels (CF, section 5).
@@ -121,7 +121,7 @@ def describe(one: Layout, groups: tuple[Group, ...]) -> str:
         lines += ["", f"group {group.name}: {group.description}"]
         for variable in group.variables:
             where = f"({', '.join(variable.dimensions)})" if variable.dimensions else ""
-            units = "" if variable.kind == "text" else f" [{variable.units}]"
+            units = f" [{variable.units}]" if "units" in variable.attributes else ""
             lines.append(
                 f"  {variable.kind:7s} {variable.name}{where}{units}: {variable.long_name}"
             )

@@ -16,6 +16,7 @@ import numpy as np
 
 from ..arrays import FloatArray
 from ..atomic.levels import level_name
+from ..background.last_scattering import IONIZED_K
 from ..background.parameters import COSMOLOGICAL, helium_mass_fraction
 from ..errors import InputError, Outcome
 from ..history.cost import check_memory
@@ -39,10 +40,6 @@ from .sensitivity import (
 )
 from .targets import Target, parse_target
 from .weighing import Weighing
-
-# Observables and line strengths are integrals from where hydrogen is ionized to 1e-6 of itself;
-# there the integration starts for them.
-_IONIZED_K = 7000.0
 
 
 class _Direct(NamedTuple):
@@ -121,7 +118,8 @@ def reach(
     redshifts = [t.redshift for t in targets if t.kind in {"x_e", "T_m"}]
     keeps = {level for t in targets if t.kind == "line" for level in (t.upper, t.lower)}
     integral = any(t.kind not in {"x_e", "T_m"} for t in targets)
-    ionized = _IONIZED_K / setup.cosmology.cmb_temperature_k - 1.0
+    # Integrals start where hydrogen is ionized, and the history with them.
+    ionized = IONIZED_K / setup.cosmology.cmb_temperature_k - 1.0
     return redshifts, tuple(sorted(keeps - {(1, 0)})), ionized if integral else 0.0
 
 

@@ -1,82 +1,205 @@
-"""Levels: names, masses of one-electron ions, and the scaling of their rates with charge."""
+"""A study of levels on small atoms: what it shares, what it refuses, what it says."""
 
 from __future__ import annotations
 
+import dataclasses
+from concurrent.futures import Executor
+from concurrent.futures.process import BrokenProcessPool
+from typing import Any
+
 import numpy as np
 import pytest
-import scipy.constants as si
 
-from levelnet.atomic.bound_bound import einstein_a
-from levelnet.atomic.bound_free import (
-    photoionization_cross_section,
-    photoionization_rate,
-    recombination_coefficient,
+from levelnet.distilled.nodes import process_pool
+from levelnet.errors import InputError, Outcome, SolveError
+from levelnet.history.run import solve
+from levelnet.history.setup import Accuracy, Setup
+from levelnet.pieces import MemoryPieces
+from levelnet.studies.levels import (
+    check_ladder,
+    default_rungs,
+    level_study,
+    n_held_out,
 )
-from levelnet.atomic.levels import hydrogenic_levels, level_name, reduced_mass_ratio
-from levelnet.errors import InputError
-from tests.tolerances import ROUND_OFF
+from levelnet.studies.rung import rung_setup
+from levelnet.studies.verdict import rung_errors, verdict, verdict_text
+from tests.small_levels import RUNGS, level_setup, small_study
+from tests.small_runs import small_setup
+from tests.unit.test_store_table import assert_same
 
 
-def test_names() -> None:
-    # Letters after f run without j (Russell, Shenstone & Turner 1929, Phys. Rev. 33, 900; from
-    # memory).
-    assert [level_name(8, l) for l in range(8)] == [f"8{x}" for x in "spdfghik"]
-    assert level_name(60, 55) == "60[l=55]"
+def test_rungs_are_histories_of_their_own() -> None:
+    # Against the whole solver at the study's accuracy: x_e, T_m, populations and milestones.
+    study = small_study()
+    assert study.rungs.n_max.tolist() == list(RUNGS)
+    rung = 3
+    setup = rung_setup(level_setup(), RUNGS[rung], None, 1e-8)
+    history = solve(setup)
+    assert np.array_equal(study.redshift, history.redshift)
+    same = study.rungs.free_electron_fraction[rung]
+    assert same == pytest.approx(history.free_electron_fraction, rel=1e-14)
+    same = study.rungs.matter_temperature_k[rung]
+    assert same == pytest.approx(history.matter_temperature_k, rel=1e-14)
+    rows = [int(np.flatnonzero(history.redshift == z)[0]) for z in study.population_redshift]
+    low = history.populations("H I")[rows][:, : len(study.level_n)]
+    assert study.rungs.population[rung] == pytest.approx(low, rel=1e-13)
+    levels = history.levels("H I")
+    assert np.array_equal(levels.n[: len(study.level_n)], study.level_n)
+    assert np.array_equal(levels.l[: len(study.level_l)], study.level_l)
+    assert study.level_n.max() == 4
+    for name, value in zip(study.observable_names, study.rungs.observable[rung], strict=True):
+        if name == "last_scattering_redshift":
+            assert value == pytest.approx(history.milestones.last_scattering_redshift, rel=1e-12)
 
 
-def test_masses_against_codata() -> None:
-    deuteron_free = si.m_e / si.m_p
-    assert reduced_mass_ratio(1) == pytest.approx(1.0 / (1.0 + deuteron_free), rel=ROUND_OFF)
-    alpha = si.physical_constants["alpha particle mass"][0]
-    assert reduced_mass_ratio(2) == pytest.approx(1.0 / (1.0 + si.m_e / alpha), rel=1e-12)
-    # C5+: nucleus of carbon 12, 12 u less six electrons.
-    carbon = 12.0 * si.u - 6.0 * si.m_e
-    assert reduced_mass_ratio(6) == pytest.approx(1.0 / (1.0 + si.m_e / carbon), rel=1e-7)
-    # Fe25+: 55.934936 u (Audi & Wapstra; from memory).
-    iron = 55.934936 * si.u - 26.0 * si.m_e
-    assert reduced_mass_ratio(26) == pytest.approx(1.0 / (1.0 + si.m_e / iron), rel=1e-7)
-
-
-@pytest.mark.parametrize("charge", [2, 3, 6, 26, 30])
-def test_scaling_with_charge(charge: int) -> None:
-    # Hydrogenic scaling (Bethe & Salpeter 1957): A ~ Z^4 mu, sigma ~ Z^-2 mu^-2, alpha ~ Z
-    # alpha(T/Z^2) with lengths in 1/mu: alpha(T) = Z (mu_1/mu)^2 alpha_1(T mu_1/(mu Z^2)).
-    mass = reduced_mass_ratio(charge) / reduced_mass_ratio(1)
-    ratio = einstein_a(4, 2, 3, 1, charge) / einstein_a(4, 2, 3, 1)
-    assert ratio == pytest.approx(charge**4 * mass, rel=10 * ROUND_OFF)
-    ratio = photoionization_cross_section(3, 1, 0.2, charge) / photoionization_cross_section(
-        3, 1, 0.2
+def test_more_levels_recombine_more() -> None:
+    # Grin & Hirata 2010; Chluba, Vasil & Dursi 2010: x_e falls with n_max at every redshift.
+    study = small_study()
+    late = study.redshift < 1500.0
+    assert np.all(np.diff(study.rungs.free_electron_fraction[:, late], axis=0) < 0.0)
+    assert np.all(
+        study.limit.free_electron_fraction.value[late]
+        < study.rungs.free_electron_fraction[-1, late]
     )
-    assert ratio == pytest.approx(charge**-2 * mass**-2, rel=10 * ROUND_OFF)
-    hot = 5000.0 * charge**2 * mass
-    ratio = recombination_coefficient(3, 1, hot, hot, charge) / recombination_coefficient(
-        3, 1, 5000.0, 5000.0
-    )
-    assert ratio == pytest.approx(charge * mass**-2, rel=1e-12)
 
 
-@pytest.mark.parametrize("charge", [0, -1, 31, 1.5, "2"])
-def test_other_charges_are_refused(charge: object) -> None:
-    with pytest.raises(InputError, match="allowed are whole numbers from 1 to 30"):
-        einstein_a(2, 1, 1, 0, charge)  # type: ignore[arg-type]
+def test_bits_do_not_depend_on_workers_or_pieces() -> None:
+    # A short history: it is the bits that count here.
+    setup, rungs, pieces = small_setup(4, 1100.0, 4), (4, 5, 6, 7), MemoryPieces()
+    told: list[float] = []
+    alone = level_study(setup, rungs, pieces=pieces, progress=lambda stage, part: told.append(part))
+    with process_pool(2) as executor:
+        assert_same(alone, level_study(setup, rungs, executor=executor))
+    assert_same(alone, level_study(setup, rungs, pieces=pieces))
+    assert told == sorted(told)
+    assert told[0] == 0.0
+    assert told[-1] == pytest.approx(1.0)
 
 
-def test_whole_numbers_may_come_as_floats() -> None:
-    assert einstein_a(2.0, 1.0, 1.0, 0.0) == einstein_a(2, 1, 1, 0)
-    with pytest.raises(InputError, match="whole numbers"):
-        einstein_a(2.5, 1, 1, 0)
+def test_foreseen_rung_knows_nothing_of_it() -> None:
+    study = small_study()
+    assert study.held_out is not None
+    assert study.held_out.n_max.tolist() == [13]
+    foreseen = study.held_out.foreseen.free_electron_fraction
+    actual = study.rungs.free_electron_fraction[-1:]
+    assert np.all(np.abs(np.log(foreseen.value / actual)) <= foreseen.relative_error)
+    late = study.redshift < 1500.0
+    assert not np.any(foreseen.value[:, late] == actual[:, late])
+
+
+@pytest.mark.parametrize(("rungs", "held"), [(1, 0), (4, 0), (5, 0), (6, 1), (7, 2), (12, 2)])
+def test_how_many_are_held_out(rungs: int, held: int) -> None:
+    assert n_held_out(rungs) == held
+
+
+def test_noise_is_measured_and_small() -> None:
+    # Differences of rungs are far better known than rungs; both than the tolerance of 1e-8.
+    noise = small_study().noise
+    assert 0.0 < noise.common < 1e-7
+    assert np.all(noise.free_electron_fraction < 1e-8)
+    assert np.all(noise.free_electron_fraction >= 1e-15)
+
+
+def test_accuracy_is_that_of_the_study_or_better() -> None:
+    assert small_study().setup.accuracy.relative == 1e-8
+    better = dataclasses.replace(level_setup(), accuracy=Accuracy(relative=5e-9))
+    assert rung_setup(better, 4, None, 5e-9).accuracy.relative == 5e-9
 
 
 @pytest.mark.parametrize(
-    "occupation", [lambda e: -1.0 + 0.0 * e, lambda e: np.nan * e, lambda e: np.ones(3), 5]
+    ("n_max", "expected"),
+    [(200, (25, 35, 50, 71, 100, 141, 200)), (30, (4, 5, 7, 11, 15, 21, 30)), (5, (4, 5))],
 )
-def test_an_impossible_field_is_refused(occupation: object) -> None:
-    with pytest.raises(InputError, match="occupation"):
-        photoionization_rate(2, 0, occupation=occupation)  # type: ignore[arg-type]
+def test_default_ladder(n_max: int, expected: tuple[int, ...]) -> None:
+    assert default_rungs(n_max) == expected
 
 
-def test_level_index() -> None:
-    levels = hydrogenic_levels(5)
-    assert (levels.n[levels.index(4, 2)], levels.l[levels.index(4, 2)]) == (4, 2)
-    with pytest.raises(InputError, match="not among the 15 levels"):
-        levels.index(6, 0)
+@pytest.mark.parametrize(
+    ("rungs", "resolve", "message"),
+    [
+        ((20,), (), "a ladder with 1 rung allows no extrapolation; 4 or more"),
+        ((20, 30, 40), (), "a ladder with 3 rungs allows"),
+        ((20, 30, 30, 40), (), "rungs = 20, 30, 30, 40: each must be larger than the one before"),
+        ((30, 20, 40, 50), (), "each must be larger"),
+        ((3, 4, 5, 6), (), "the lowest allowed is 4"),
+        ((4, 5, 6, 8), (8,), "resolve = 8: must be below the longest rung, n_max = 8"),
+        ((4, 5, 6, 8), (3,), "resolve = 3: the lowest allowed is 4"),
+        ((4, 5, 6, 8), (6, 5), "resolve = 6, 5: each must be larger"),
+    ],
+)
+def test_ladders_that_tell_nothing(
+    rungs: tuple[int, ...], resolve: tuple[int, ...], message: str
+) -> None:
+    with pytest.raises(InputError, match=message):
+        level_study(level_setup(), rungs, resolve=resolve)
+
+
+def test_lines_must_not_change_from_rung_to_rung() -> None:
+    def setup(lines: dict[str, Any]) -> Setup:
+        return small_setup(20, lines=lines)
+
+    with pytest.raises(InputError, match='lyman_lines = "all": every rung would open'):
+        check_ladder(setup({"lyman_lines": "all"}), (10, 12, 14, 16))
+    with pytest.raises(InputError, match=r"lowest allowed is 11 \(10 Lyman lines are open\)"):
+        check_ladder(setup({"lyman_lines": 10}), (10, 12, 14, 16))
+    check_ladder(setup({"lyman_lines": 9}), (10, 12, 14, 16))
+
+
+def test_too_large_for_memory_is_said_before_work() -> None:
+    with pytest.raises(InputError, match="memory needed"):
+        level_study(level_setup(), (4, 6, 8, 90_000))
+
+
+def test_step_limit_is_a_failure_of_the_rung() -> None:
+    setup = dataclasses.replace(level_setup(), accuracy=Accuracy(max_steps=10))
+    with pytest.raises(SolveError, match=r"rung n_max = \d+: the step limit was reached") as caught:
+        level_study(setup, (4, 5, 6, 7))
+    assert caught.value.outcome is Outcome.STEP_LIMIT
+
+
+class Dying(Executor):
+    """An executor whose processes die."""
+
+    def submit(self, *arguments: Any, **options: Any) -> Any:
+        raise BrokenProcessPool("gone")
+
+
+def test_dead_worker_is_one_line() -> None:
+    with pytest.raises(SolveError, match="a worker process died while it ran a rung"):
+        level_study(level_setup(), (4, 5, 6, 7), executor=Dying())
+
+
+def test_verdict_is_about_the_worst_redshift() -> None:
+    study = small_study()
+    found = verdict(study, 0.3, 900.0, 1600.0)
+    assert found.n_max is not None
+    errors = rung_errors(study, 900.0, 1600.0)
+    assert np.all(np.diff(errors) < 0.0)
+    good = [n for n, error in zip(RUNGS, errors.tolist(), strict=True) if error <= 0.3]
+    assert found.n_max <= min(good)
+    assert found.error <= 0.3
+    text = verdict_text(found, RUNGS[-1])
+    assert text.startswith("for 30 % in x_e at 900 < z < 1600: n_max = ")
+    tight = verdict_text(verdict(study, 1e-7, 200.0, 1600.0), RUNGS[-1])
+    assert "not known from these rungs" in tight
+
+
+@pytest.mark.parametrize(
+    ("within", "low", "high", "message"),
+    [
+        (0.0, 200.0, 1600.0, "within = 0: allowed"),
+        (2.0, 200.0, 1600.0, "within = 2: allowed"),
+        (float("nan"), 200.0, 1600.0, "within = nan"),
+        (1e-3, 1600.0, 200.0, "the lower redshift comes first"),
+        (1e-3, 20.0, 30.0, "no output redshift of the setup lies there"),
+    ],
+)
+def test_verdicts_that_make_no_sense(within: float, low: float, high: float, message: str) -> None:
+    with pytest.raises(InputError, match=message):
+        verdict(small_study(), within, low, high)
+
+
+def test_notes_say_which_lines_escape() -> None:
+    notes = " ".join(small_study().notes)
+    assert "Lyman-alpha alone" in notes
+    assert "no statement about a CMB spectrum" in notes

@@ -1,0 +1,167 @@
+"""A study of truncations as text for people and as plain values for JSON."""
+
+from __future__ import annotations
+
+import dataclasses
+import math
+from typing import TYPE_CHECKING, Any
+
+from .output import aligned, nearest_rows, row
+
+if TYPE_CHECKING:
+    from ..studies.level_records import LevelStudy
+    from ..studies.verdict import Verdict
+
+
+def level_values(study: LevelStudy, found: Verdict) -> dict[str, Any]:
+    """Collect a study, whole, with its verdict on x_e."""
+    from ..studies.verdict import rung_errors, verdict_text
+
+    held, rungs = study.held_out, study.rungs
+    return {
+        "title": study.setup.title,
+        "setup_digest": study.setup.digest,
+        "outcome": study.outcome.name,
+        "ok": study.outcome.ok,
+        "rungs": {
+            **_plain_rungs(rungs),
+            "largest_error": rung_errors(study, found.low, found.high),
+        },
+        "redshift": study.redshift,
+        "observable_names": study.observable_names,
+        "observable_units": study.observable_units,
+        "limit": _plain(study.limit),
+        "noise": _plain(study.noise),
+        "held_out": None
+        if held is None
+        else {"n_max": held.n_max, "foreseen": _plain(held.foreseen), **_held_out_figures(study)},
+        "resolved": None if study.resolved is None else _plain_rungs(study.resolved),
+        "verdict": {
+            **dataclasses.asdict(found),
+            "text": verdict_text(found, int(rungs.n_max[-1])),
+        },
+        "notes": study.notes,
+    }
+
+
+def _plain(record: Any) -> Any:
+    if dataclasses.is_dataclass(record):
+        return {one.name: _plain(getattr(record, one.name)) for one in dataclasses.fields(record)}
+    return record
+
+
+def _plain_rungs(rungs: Any) -> dict[str, Any]:
+    return {name: value for name, value in _plain(rungs).items() if name != "population"}
+
+
+def level_summary(study: LevelStudy, found: Verdict) -> str:
+    """Return the summary of a study as lines of plain text."""
+    from ..studies.verdict import verdict_text
+
+    rungs = ", ".join(str(n) for n in study.rungs.n_max.tolist())
+    head = [
+        study.setup.title or "(no title)",
+        row("levels", f"setup {study.setup.digest}: n_max = {rungs}"),
+        row("outcome", study.outcome.value),
+        "",
+        *_rung_lines(study, found),
+        "",
+        *_limit_lines(study),
+        "",
+    ]
+    body = [row("verdict", verdict_text(found, int(study.rungs.n_max[-1])))]
+    return "\n".join(
+        [*head, *body, *_check_lines(study), *(row("note", text) for text in study.notes)]
+    )
+
+
+_SHORT = {
+    "last_scattering_redshift": "z_*",
+    "visibility_peak_redshift": "peak of g",
+    "visibility_width": "width of g",
+    "last_scattering_time_s": "t at z_*",
+    "sound_horizon_mpc": "r_s",
+    "damping_per_mpc": "k_D",
+    "drag_redshift": "z_drag",
+    "drag_horizon_mpc": "r_drag",
+}
+
+
+def _rung_lines(study: LevelStudy, found: Verdict) -> list[str]:
+    """Errors of each rung against the limit: x_e with its bar, observables without."""
+    import numpy as np
+
+    from ..studies.verdict import rung_errors
+
+    names = [_SHORT.get(name, name) for name in study.observable_names]
+    errors = study.rungs.observable / study.limit.observable.value - 1.0
+    largest = rung_errors(study, found.low, found.high)
+    head = ("n_max", f"x_e, {found.low:g} < z < {found.high:g}", *names)
+    body = [
+        (str(n), f"{size:.2e}", *(f"{one:+.1e}" if np.isfinite(one) else "-" for one in line))
+        for n, size, line in zip(study.rungs.n_max.tolist(), largest, errors, strict=True)
+    ]
+    return [
+        "relative error by truncation; of x_e the largest, error bar included",
+        *aligned([head, *body], right=True),
+    ]
+
+
+def _limit_lines(study: LevelStudy) -> list[str]:
+    limit, longest = study.limit.free_electron_fraction, study.rungs.n_max[-1]
+    last = study.rungs.free_electron_fraction[-1]
+    head = ("z", "x_e, all levels", "error bar", f"x_e({longest})/x_e - 1", "exponent")
+    body = [
+        (
+            f"{study.redshift[k]:.2f}",
+            f"{limit.value[k]:.8e}",
+            f"{limit.relative_error[k]:.1e}",
+            f"{last[k] / limit.value[k] - 1.0:+.2e}",
+            f"{limit.exponent[k]:.2f}" if limit.fitted[k] else "no law",
+        )
+        for k in nearest_rows(study.redshift)
+    ]
+    return aligned([head, *body], right=True)
+
+
+def _held_out_figures(study: LevelStudy) -> dict[str, Any]:
+    """Of each rung held out: largest miss over its bar, and largest bar over the correction."""
+    import numpy as np
+
+    assert study.held_out is not None
+    count = len(study.held_out.n_max)
+    seen = study.held_out.foreseen.free_electron_fraction
+    actual = study.rungs.free_electron_fraction[-count:]
+    before = study.rungs.free_electron_fraction[-count - 1]
+    miss = np.abs(np.log(seen.value / actual)) / seen.relative_error
+    with np.errstate(divide="ignore"):
+        bar = seen.relative_error / np.abs(np.log(seen.value / before))
+    asked = (study.redshift >= 200.0) & (study.redshift <= 1600.0) & (seen.fitted == 1)
+    return {
+        "largest_miss_over_bar": np.max(miss, axis=1),
+        "largest_bar_over_correction": np.max(np.where(asked, bar, 0.0), axis=1),
+    }
+
+
+def _check_lines(study: LevelStudy) -> list[str]:
+    held = study.held_out
+    if held is None:
+        return [row("check", "none: six rungs or more are needed to hold one out of the fit")]
+    figures = _held_out_figures(study)
+    shorter = int(study.rungs.n_max[-len(held.n_max) - 1])
+    return [
+        row(
+            "check",
+            f"x_e of n_max = {n}, foreseen from rungs up to {shorter}: off by at most "
+            f"{miss:.2f} of its error bar at every z"
+            + ("" if miss <= 1.0 else ", OUTSIDE THE BAR")
+            + f"; the bar is at most {100.0 * bar:.0f} % of the correction (200 <= z <= 1600)",
+        )
+        for n, miss, bar in zip(
+            held.n_max.tolist(),
+            figures["largest_miss_over_bar"].tolist(),
+            figures["largest_bar_over_correction"].tolist(),
+            strict=True,
+        )
+        if math.isfinite(miss)
+    ]

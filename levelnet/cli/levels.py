@@ -1,0 +1,193 @@
+"""``levelnet levels``: how many levels of hydrogen matter."""
+
+from __future__ import annotations
+
+import argparse
+import time
+from pathlib import Path
+from typing import TYPE_CHECKING
+
+from ..errors import InputError
+from .console import Console
+from .distill import worker_processes
+from .level_output import level_summary, level_values
+from .output import print_json, size_text, time_text
+from .paths import check_folder, check_target
+from .solve import cache_pieces
+
+if TYPE_CHECKING:
+    from ..history.setup import Setup
+    from ..studies.level_records import LevelStudy
+    from ..studies.verdict import Verdict
+
+NAME = "levels"
+SUMMARY = "find out how many levels of hydrogen matter"
+DESCRIPTION = (
+    "Run a setup on a ladder of n_max, carry x_e, T_m and the observables to infinitely many "
+    "levels with error bars, hold the longest rungs against what the shorter ones foresee, say "
+    "which n_max is enough, and write all of it to an HDF5 file. A run that was killed goes on "
+    "where it was."
+)
+EXAMPLE = "levelnet levels setup.toml --rungs 20,30,45,70,100,140,200 --plot figures"
+_LONG_S = 10.0  # above it the cost is announced before the work starts
+WITHIN, BETWEEN = 1e-3, (200.0, 1600.0)
+
+
+def add_arguments(parser: argparse.ArgumentParser) -> None:
+    """Declare the options of this command."""
+    parser.add_argument("setup", metavar="SETUP", type=Path, help="setup file (TOML)")
+    parser.add_argument(
+        "-o",
+        "--output",
+        metavar="FILE",
+        type=Path,
+        help="result file (default: name of the setup with -levels.h5, in the current folder)",
+    )
+    parser.add_argument(
+        "--rungs",
+        metavar="N,N,...",
+        help="n_max of each rung, ascending, four or more, in steps of a factor two or less "
+        "(default: seven in steps of sqrt(2) up to the n_max of the setup)",
+    )
+    parser.add_argument(
+        "--resolve",
+        metavar="L,L,...",
+        help="also run the longest rung with levels resolved in l up to these n only",
+    )
+    parser.add_argument(
+        "--within",
+        metavar="ERROR",
+        type=float,
+        default=WITHIN,
+        help=f"relative error of x_e that the verdict allows (default: {WITHIN:g})",
+    )
+    parser.add_argument(
+        "--between",
+        metavar=("LOW", "HIGH"),
+        nargs=2,
+        type=float,
+        default=BETWEEN,
+        help="redshifts between which it allows it (default: 200 1600)",
+    )
+    parser.add_argument("--plot", metavar="FOLDER", type=Path, help="write figures into FOLDER")
+    parser.add_argument(
+        "--workers",
+        metavar="N",
+        type=int,
+        help="processes that run rungs (default: as many as there are processors)",
+    )
+    parser.add_argument(
+        "--no-cache", action="store_true", help="neither read nor fill the cache of reductions"
+    )
+    parser.add_argument("--force", action="store_true", help="overwrite result and figures")
+
+
+def run(options: argparse.Namespace, console: Console) -> int:
+    """Run the ladder, write it, print the verdict; 0 if every rung is ok, 1 if not."""
+    from ..history.setup import load_setup
+
+    setup = load_setup(options.setup)
+    rungs = None if options.rungs is None else whole_numbers("--rungs", options.rungs)
+    resolve = () if options.resolve is None else whole_numbers("--resolve", options.resolve)
+    target = options.output or Path(f"{options.setup.stem}-levels.h5")
+    check_target(target, options.force, options.setup)
+    ladder = _checked_ladder(setup, rungs, resolve, options)
+    start = time.monotonic()
+    study = _study(setup, ladder, resolve, options, console)
+    seconds = time.monotonic() - start
+    found = judged(study, options.within, *options.between)
+
+    from ..store import write
+
+    write(study, target, force=options.force)
+    written = [target, *save_figures(study, options.plot, options.force, console)]
+    if options.json:
+        print_json({**level_values(study, found), "written": written, "seconds": seconds})
+    else:
+        print(level_summary(study, found))
+        for path in written:
+            print(f"{'written':<22}{path}")
+        print(f"{'time':<22}{time_text(seconds)}")
+    if not study.outcome.ok:
+        console.error(f"{study.outcome.name}: {study.outcome.value}", kind="")
+        return 1
+    return 0
+
+
+def whole_numbers(option: str, text: str) -> tuple[int, ...]:
+    """Read whole numbers with commas between; InputError names the option and the part."""
+    parts = text.replace(" ", "").split(",")
+    for part in parts:
+        if not (part.isascii() and part.isdigit() and len(part) <= 6):
+            raise InputError(
+                f'{option}: "{part}" is no whole number; write values such as 20,30,45'
+            )
+    return tuple(int(part) for part in parts)
+
+
+def _checked_ladder(
+    setup: Setup,
+    rungs: tuple[int, ...] | None,
+    resolve: tuple[int, ...],
+    options: argparse.Namespace,
+) -> tuple[int, ...]:
+    """The rungs to run; what anything later would refuse is refused here, before any work."""
+    from ..history.integrate import output_redshifts
+    from ..report.levels import check_figures
+    from ..studies.levels import check_ladder, default_rungs
+    from ..studies.verdict import outputs_between
+
+    ladder = default_rungs(setup.hydrogen.n_max) if rungs is None else rungs
+    check_ladder(setup, ladder, resolve)
+    outputs_between(output_redshifts(setup), options.within, *options.between)
+    if options.plot is not None:
+        check_folder(options.plot)
+        check_figures(options.plot, len(ladder), bool(resolve), options.force)
+    return ladder
+
+
+def _study(
+    setup: Setup,
+    ladder: tuple[int, ...],
+    resolve: tuple[int, ...],
+    options: argparse.Namespace,
+    console: Console,
+) -> LevelStudy:
+    from ..history.cost import check_memory
+    from ..studies.levels import level_study
+    from ..studies.rung import rung_setup
+
+    cost = check_memory(rung_setup(setup, ladder[-1], None, 1e-8))
+    if cost.seconds > _LONG_S:
+        console.notice(
+            f"estimated for the longest rung: {time_text(cost.seconds)}, "
+            f"{size_text(cost.memory_bytes)} of memory"
+        )
+    pieces = None if options.no_cache else cache_pieces(console)
+    with console.progress() as progress, worker_processes(options.workers) as executor:
+        return level_study(
+            setup, ladder, resolve=resolve, executor=executor, pieces=pieces, progress=progress
+        )
+
+
+def judged(
+    study: LevelStudy, within: float = WITHIN, low: float | None = None, high: float | None = None
+) -> Verdict:
+    """Give the verdict; without a range, on as much of the usual one as the study covers."""
+    from ..studies.verdict import verdict
+
+    low = max(BETWEEN[0], float(study.redshift[-1])) if low is None else low
+    high = min(BETWEEN[1], float(study.redshift[0])) if high is None else high
+    return verdict(study, within, low, high)
+
+
+def save_figures(
+    study: LevelStudy, folder: Path | None, force: bool, console: Console
+) -> list[Path]:
+    """Write the figures of a study, if a folder is given."""
+    if folder is None:
+        return []
+    from ..report.levels import save_level_figures
+
+    with console.progress() as progress:
+        return list(save_level_figures(study, folder, force, progress))
