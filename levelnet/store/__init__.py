@@ -2,6 +2,7 @@
 
 from .exports import export_paths, write_export
 from .layout import LAYOUT_NAME, LAYOUT_VERSION, describe_layout
+from .level_layout import LEVEL_LAYOUT, describe_level_layout
 from .read import read, read_attributes, read_table
 from .table_layout import DISTILLED_LAYOUT, TABLE_LAYOUT, describe_table_layout
 from .text import write_csv, write_distilled_csv
@@ -13,10 +14,12 @@ __all__ = [
     "DISTILLED_LAYOUT",
     "LAYOUT_NAME",
     "LAYOUT_VERSION",
+    "LEVEL_LAYOUT",
     "TABLE_LAYOUT",
     "WEIGHING_LAYOUT",
     "check_output",
     "describe_layout",
+    "describe_level_layout",
     "describe_table_layout",
     "describe_weighing_layout",
     "export_paths",

@@ -15,6 +15,7 @@ import pytest
 
 from levelnet.background.cosmology import Cosmology
 from levelnet.history.setup import Setup
+from levelnet.pieces import MemoryPieces
 from levelnet.studies.level_records import Estimate, LevelStudy
 from levelnet.studies.levels import carry_all, level_study
 from levelnet.studies.rung import RungResult, compute_rung, rung_setup
@@ -24,6 +25,7 @@ from tests.tolerances import published
 pytestmark = pytest.mark.slow
 
 LADDER = (20, 30, 45, 70, 100, 140, 200)
+PIECES = MemoryPieces()  # reductions that several tests ask for
 # Invented universes at the edge of what anybody would fit, and choices that change the channels.
 CASES: dict[str, tuple[Cosmology, dict[str, Any]]] = {
     "fiducial": (COSMOLOGY, {}),
@@ -40,12 +42,12 @@ def setup_of(case: str) -> Setup:
 
 @lru_cache(maxsize=8)
 def study_of(case: str, rungs: tuple[int, ...] = LADDER) -> LevelStudy:
-    return level_study(setup_of(case), rungs)
+    return level_study(setup_of(case), rungs, pieces=PIECES)
 
 
 @lru_cache(maxsize=8)
 def longer(case: str, n_max: int) -> RungResult:
-    return compute_rung(rung_setup(setup_of(case), n_max, None, 1e-8), (1000.0,), None)
+    return compute_rung(rung_setup(setup_of(case), n_max, None, 1e-8), (1000.0,), PIECES)
 
 
 def asked(study: LevelStudy) -> np.ndarray:
@@ -84,7 +86,7 @@ def test_law_foresees_longer_rungs(case: str, rungs: tuple[int, ...]) -> None:
 def test_limits_of_short_and_long_ladders_agree(case: str) -> None:
     # From rungs up to 100 and up to 300: within the bar of the former.
     short = study_of(case, LADDER[:5])
-    long = level_study(setup_of(case), (45, 70, 100, 140, 200, 300))
+    long = level_study(setup_of(case), (45, 70, 100, 140, 200, 300), pieces=PIECES)
     for name in ("free_electron_fraction", "matter_temperature_k", "observable"):
         one, other = getattr(short.limit, name), getattr(long.limit, name)
         assert np.all(np.abs(np.log(one.value / other.value)) <= one.relative_error)

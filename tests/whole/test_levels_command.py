@@ -1,0 +1,126 @@
+"""``levelnet levels`` from outside: the verdict, the file, JSON, figures, one-line complaints.
+
+What is expected is the project's own contract, as in test_command_line.py.
+"""
+
+from __future__ import annotations
+
+import json
+import os
+import signal
+import subprocess
+import sys
+import time
+from pathlib import Path
+
+import pytest
+
+import levelnet
+from levelnet.cli.main import main
+from levelnet.studies.level_records import LevelStudy
+from tests.whole.test_command_line import GOOD, environment
+
+LADDER = ("--rungs", "4,5,6,8,10,12", "--between", "400", "1600")
+
+
+@pytest.fixture
+def folder(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Path:
+    """Work in an empty folder that holds one good setup."""
+    monkeypatch.chdir(tmp_path)
+    (tmp_path / "good.toml").write_text(GOOD)
+    return tmp_path
+
+
+def test_study_from_setup_to_verdict(folder: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    words = [
+        "levels",
+        "good.toml",
+        *LADDER,
+        "--within",
+        "0.2",
+        "--plot",
+        "figures",
+        "--workers",
+        "1",
+    ]
+    assert main([*words, "--quiet"]) == 0
+    said = capsys.readouterr().out
+    assert "for 20 % in x_e at 400 < z < 1600: n_max = " in said
+    assert "foreseen from rungs up to 10" in said
+    study = levelnet.read("good-levels.h5")
+    assert isinstance(study, LevelStudy)
+    assert study.rungs.n_max.tolist() == [4, 5, 6, 8, 10, 12]
+    assert sorted(path.name for path in (folder / "figures").iterdir()) == [
+        "levels-check.pdf",
+        "levels-check.svg",
+        "levels.pdf",
+        "levels.svg",
+    ]
+    # The file is never replaced unasked, and this is said before any work.
+    start = time.monotonic()
+    assert main(words) == 2
+    assert "already exists" in capsys.readouterr().err
+    assert main([*words[:-4], "--output", "other.h5", "--plot", "figures"]) == 2
+    assert "exists already" in capsys.readouterr().err
+    assert time.monotonic() - start < 5.0
+
+    assert main(["show", "good-levels.h5", "--json"]) == 0
+    shown = json.loads(capsys.readouterr().out)
+    assert shown["rungs"]["n_max"] == [4, 5, 6, 8, 10, 12]
+    assert shown["limit"]["free_electron_fraction"]["value"] == (
+        study.limit.free_electron_fraction.value.tolist()
+    )
+    assert shown["verdict"]["within"] == 1e-3
+    assert shown["held_out"]["n_max"] == [12]
+    assert main(["show", "good-levels.h5", "--plot", "again"]) == 0
+    assert (folder / "again" / "levels.svg").exists()
+    capsys.readouterr()
+    assert main(["show", "good-levels.h5", "--csv"]) == 2
+    assert "not for a study of levels" in capsys.readouterr().err
+
+
+@pytest.mark.parametrize(
+    ("words", "message"),
+    [
+        (["--rungs", "20"], "a ladder with 1 rung allows no extrapolation; 4 or more"),
+        (["--rungs", "4,5,5,6"], "each must be larger than the one before"),
+        (["--rungs", "3,4,5,6"], "the lowest allowed is 4"),
+        (["--rungs", "4,5,six"], '"six" is no whole number'),
+        (["--rungs", "4,5,6,70000"], "memory needed"),
+        (["--rungs", "4,5,6,8", "--resolve", "8"], "must be below the longest rung"),
+        (["--rungs", "4,5,6,8", "--within", "0"], "within = 0"),
+        (["--rungs", "4,5,6,8", "--between", "1", "2"], "no output redshift"),
+        (["--rungs", "4,5,6,8", "--workers", "0"], "--workers = 0"),
+        (["--rungs", "4,5,6,8", "--output", "no/such/x.h5"], "does not exist"),
+        (["--rungs", "4,5,6,8", "--plot", "good.toml"], "is a file, not a folder"),
+        ([], "a ladder with 1 rung"),  # n_max = 4 of the setup
+    ],
+)
+def test_complaints_are_one_line(
+    folder: Path, capsys: pytest.CaptureFixture[str], words: list[str], message: str
+) -> None:
+    start = time.monotonic()
+    assert main(["levels", "good.toml", *words]) == 2
+    said = capsys.readouterr()
+    assert said.out == ""
+    assert len(said.err.splitlines()) == 1
+    assert message in said.err
+    assert [path.name for path in folder.iterdir()] == ["good.toml"]
+    assert time.monotonic() - start < 5.0
+
+
+def test_interrupt_leaves_no_file(folder: Path) -> None:
+    words = [sys.executable, "-m", "levelnet", "levels", "good.toml", "--rungs", "20,30,40,120"]
+    cache = {"LEVELNET_CACHE": str(folder / "cache")}
+    with subprocess.Popen(
+        words, cwd=folder, env={**environment(), **cache}, stderr=subprocess.PIPE, text=True
+    ) as running:
+        # Rungs at work: a reduction has been kept.
+        deadline = time.monotonic() + 60.0
+        while not list((folder / "cache").glob("*.piece")) and time.monotonic() < deadline:
+            time.sleep(0.05)
+        os.kill(running.pid, signal.SIGINT)
+        _, said = running.communicate(timeout=60)
+    assert running.returncode == 130
+    assert "no file was left half-written" in said
+    assert {path.name for path in folder.iterdir()} == {"good.toml", "cache"}
