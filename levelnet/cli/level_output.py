@@ -10,11 +10,13 @@ from .output import aligned, nearest_rows, row
 
 if TYPE_CHECKING:
     from ..studies.level_records import LevelStudy
+    from ..studies.level_requirement import Demands
     from ..studies.verdict import Verdict
 
 
-def level_values(study: LevelStudy, found: Verdict) -> dict[str, Any]:
-    """Collect a study, whole, with its verdict on x_e."""
+def level_values(study: LevelStudy, found: Verdict, met: Demands | None = None) -> dict[str, Any]:
+    """Collect a study, whole, with its verdict on x_e and, where asked, on a requirement."""
+    from ..studies.level_requirement import demands_text
     from ..studies.verdict import rung_errors, verdict_text
 
     held, rungs = study.held_out, study.rungs
@@ -40,6 +42,12 @@ def level_values(study: LevelStudy, found: Verdict) -> dict[str, Any]:
             **dataclasses.asdict(found),
             "text": verdict_text(found, int(rungs.n_max[-1])),
         },
+        "requirement": None
+        if met is None
+        else {
+            **dataclasses.asdict(met),
+            "text": demands_text(met, int(rungs.n_max[-1])),
+        },
         "notes": study.notes,
     }
 
@@ -54,8 +62,9 @@ def _plain_rungs(rungs: Any) -> dict[str, Any]:
     return {name: value for name, value in _plain(rungs).items() if name != "population"}
 
 
-def level_summary(study: LevelStudy, found: Verdict) -> str:
+def level_summary(study: LevelStudy, found: Verdict, met: Demands | None = None) -> str:
     """Return the summary of a study as lines of plain text."""
+    from ..studies.level_requirement import demands_text
     from ..studies.verdict import verdict_text
 
     rungs = ", ".join(str(n) for n in study.rungs.n_max.tolist())
@@ -70,9 +79,24 @@ def level_summary(study: LevelStudy, found: Verdict) -> str:
         "",
     ]
     body = [row("verdict", verdict_text(found, int(study.rungs.n_max[-1])))]
+    if met is not None:
+        head += [*_demand_lines(study, met), ""]
+        body.append(row("verdict", demands_text(met, int(study.rungs.n_max[-1]))))
     return "\n".join(
         [*head, *body, *_check_lines(study), *(row("note", text) for text in study.notes)]
     )
+
+
+def _demand_lines(study: LevelStudy, met: Demands) -> list[str]:
+    """Every demand on every rung: error, bar included, over its limit."""
+    head = ("requirement", "limit", *(str(n) for n in study.rungs.n_max.tolist()))
+    body = []
+    for k, demand in enumerate(met.rungs[0]):
+        unit = " sigma" if demand.unit == "sigma" else ""
+        line = [rung[k] for rung in met.rungs]
+        cells = [f"{one.error:.1e} {'ok' if one.passed else 'no'}" for one in line]
+        body.append((demand.name, f"{demand.limit:g}{unit}", *cells))
+    return aligned([head, *body], right=True)
 
 
 _SHORT = {

@@ -18,6 +18,7 @@ from .solve import cache_pieces
 if TYPE_CHECKING:
     from ..history.setup import Setup
     from ..studies.level_records import LevelStudy
+    from ..studies.requirement import Requirement
     from ..studies.verdict import Verdict
 
 NAME = "levels"
@@ -69,6 +70,12 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
         default=BETWEEN,
         help="redshifts between which it allows it (default: 200 1600)",
     )
+    parser.add_argument(
+        "--requirement",
+        metavar="FILE",
+        type=Path,
+        help="accuracy that is asked (TOML): also say which n_max meets it",
+    )
     parser.add_argument("--plot", metavar="FOLDER", type=Path, help="write figures into FOLDER")
     parser.add_argument(
         "--workers",
@@ -85,26 +92,29 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
 def run(options: argparse.Namespace, console: Console) -> int:
     """Run the ladder, write it, print the verdict; 0 if every rung is ok, 1 if not."""
     from ..history.setup import load_setup
+    from ..studies.level_requirement import demands
 
     setup = load_setup(options.setup)
+    requirement = _requirement(options.requirement, setup)
     rungs = None if options.rungs is None else whole_numbers("--rungs", options.rungs)
     resolve = () if options.resolve is None else whole_numbers("--resolve", options.resolve)
     target = options.output or Path(f"{options.setup.stem}-levels.h5")
     check_target(target, options.force, options.setup)
     ladder = _checked_ladder(setup, rungs, resolve, options)
     start = time.monotonic()
-    study = _study(setup, ladder, resolve, options, console)
+    study = _study(setup, ladder, resolve, requirement, options, console)
     seconds = time.monotonic() - start
     found = judged(study, options.within, *options.between)
+    met = None if requirement is None else demands(study, requirement)
 
     from ..store import write
 
     write(study, target, force=options.force)
     written = [target, *save_figures(study, options.plot, options.force, console)]
     if options.json:
-        print_json({**level_values(study, found), "written": written, "seconds": seconds})
+        print_json({**level_values(study, found, met), "written": written, "seconds": seconds})
     else:
-        print(level_summary(study, found))
+        print(level_summary(study, found, met))
         for path in written:
             print(f"{'written':<22}{path}")
         print(f"{'time':<22}{time_text(seconds)}")
@@ -112,6 +122,19 @@ def run(options: argparse.Namespace, console: Console) -> int:
         console.error(f"{study.outcome.name}: {study.outcome.value}", kind="")
         return 1
     return 0
+
+
+def _requirement(path: Path | None, setup: Setup) -> Requirement | None:
+    """Read a requirement; what the outputs of the setup cannot answer is refused at once."""
+    if path is None:
+        return None
+    from ..history.integrate import output_redshifts
+    from ..studies.level_requirement import check_covered
+    from ..studies.requirement import load_requirement
+
+    requirement = load_requirement(path)
+    check_covered(requirement, output_redshifts(setup))
+    return requirement
 
 
 def whole_numbers(option: str, text: str) -> tuple[int, ...]:
@@ -150,10 +173,12 @@ def _study(
     setup: Setup,
     ladder: tuple[int, ...],
     resolve: tuple[int, ...],
+    requirement: Requirement | None,
     options: argparse.Namespace,
     console: Console,
 ) -> LevelStudy:
     from ..history.cost import check_memory
+    from ..studies.level_requirement import depths_asked
     from ..studies.levels import level_study
     from ..studies.rung import rung_setup
 
@@ -166,7 +191,13 @@ def _study(
     pieces = None if options.no_cache else cache_pieces(console)
     with console.progress() as progress, worker_processes(options.workers) as executor:
         return level_study(
-            setup, ladder, resolve=resolve, executor=executor, pieces=pieces, progress=progress
+            setup,
+            ladder,
+            resolve=resolve,
+            optical_depth_to=() if requirement is None else depths_asked(requirement),
+            executor=executor,
+            pieces=pieces,
+            progress=progress,
         )
 
 

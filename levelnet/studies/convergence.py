@@ -15,6 +15,7 @@ laws, the law without the longest rung, and a power law L + C N^-p with free exp
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
 from typing import NamedTuple
 
@@ -210,17 +211,35 @@ def smallest_n_max(
         error, bar = truncation_error(n_max, logarithms, noise, at)
         return np.asarray((np.abs(error) + bar) / allowed)
 
+    found, beyond = first_to_pass(lambda at: bool(shares(at).max() <= 1.0), n_max)
+    worst = shares(_FURTHEST * int(n_max[-1]) if found is None else found)
+    return Smallest(found, beyond, int(np.argmax(worst)), float(worst.max()))
+
+
+def first_to_pass(passes: Callable[[int], bool], n_max: IntArray) -> tuple[int | None, bool]:
+    """Smallest n_max from the shortest rung up that passes, as do all above it.
+
+    Parameters
+    ----------
+    passes : callable
+        ``passes(n_max)``.
+    n_max : ndarray of int, shape (n_rungs,)
+        Rungs, ascending.
+
+    Returns
+    -------
+    int or None, bool
+        None where not even ten times the longest rung passes; and whether it is beyond the rungs.
+    """
     low, high = int(n_max[0]) - 1, int(n_max[-1])
-    if shares(high).max() > 1.0:
+    if not passes(high):
         low, high = high, _FURTHEST * high
-        if shares(high).max() > 1.0:
-            worst = shares(high)
-            return Smallest(None, True, int(np.argmax(worst)), float(worst.max()))
+        if not passes(high):
+            return None, True
     while high - low > 1:
         middle = (low + high) // 2
-        low, high = (low, middle) if shares(middle).max() <= 1.0 else (middle, high)
-    found = shares(high)
-    return Smallest(high, high > n_max[-1], int(np.argmax(found)), float(found.max()))
+        low, high = (low, middle) if passes(middle) else (middle, high)
+    return high, bool(high > n_max[-1])
 
 
 def check_rung_count(count: int) -> None:

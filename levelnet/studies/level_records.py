@@ -216,5 +216,5 @@ def level_notes(study: LevelStudy) -> tuple[str, ...]:
         f"error bars are those of truncation; numerical errors common to all rungs are below "
         f"{accuracy:g} by tolerance (x_e measured: {study.noise.common:.0e}); what the physics "
         "leaves out (collisions, line transfer, helium) is larger and in none of them",
-        "no statement about a CMB spectrum is made: that takes a response file",
+        "no statement about a CMB spectrum is made without a response file",
     )

@@ -6,11 +6,11 @@ import dataclasses
 import itertools
 from collections.abc import Callable, Iterable, Iterator, Sequence
 from concurrent.futures import BrokenExecutor, Executor, Future, as_completed
+from functools import partial
 
 import numpy as np
 
 from ..arrays import FloatArray
-from ..background.last_scattering import OBSERVABLES, UNITS
 from ..errors import InputError, Outcome, SolveError
 from ..history.cost import check_memory, estimate
 from ..history.integrate import output_redshifts
@@ -21,6 +21,7 @@ from .level_records import Estimate, Estimates, HeldOut, LevelStudy, Noise, Rung
 from .rung import LOW_N, RungResult, compute_rung, rung_setup
 
 Progress = Callable[[str, float], None]
+Task = Callable[[Setup], RungResult]
 
 DEFAULT_COUNT = 7
 """Rungs of a ladder that is not given."""
@@ -40,6 +41,7 @@ def level_study(
     rungs: Iterable[int] | None = None,
     *,
     resolve: Iterable[int] = (),
+    optical_depth_to: Iterable[float] = (),
     executor: Executor | None = None,
     pieces: Pieces | None = None,
     progress: Progress | None = None,
@@ -56,6 +58,8 @@ def level_study(
         steps of sqrt(2) up to the n_max of the setup.
     resolve : iterable of int, optional
         Values of resolve_l_to to try at the longest n_max, ascending.
+    optical_depth_to : iterable of float, optional (dimensionless)
+        Redshifts Z for which optical_depth(Z) is among the observables.
     executor : concurrent.futures.Executor, optional
         Runs the rungs, the longest first; None: this process does. The bits are the same.
     pieces : Pieces, optional
@@ -96,7 +100,13 @@ def level_study(
     coarse = [rung_setup(setup, n, None, _COARSER * relative) for n in ladder[:2]]
     check_memory(jobs[len(ladder) - 1], int(getattr(executor, "_max_workers", 1)))
     places = _population_redshifts(output_redshifts(setup))
-    results = _run([*jobs, *coarse], places, executor, pieces, progress)
+    task = partial(
+        compute_rung,
+        population_redshift=places,
+        pieces=pieces,
+        optical_depth_to=tuple(optical_depth_to),
+    )
+    results = _run([*jobs, *coarse], task, executor, progress)
     return _assemble(jobs, len(ladder), results, places)
 
 
@@ -136,11 +146,7 @@ def _population_redshifts(redshift: FloatArray) -> tuple[float, ...]:
 
 
 def _run(
-    jobs: list[Setup],
-    places: tuple[float, ...],
-    executor: Executor | None,
-    pieces: Pieces | None,
-    progress: Progress | None,
+    jobs: list[Setup], task: Task, executor: Executor | None, progress: Progress | None
 ) -> list[RungResult]:
     """Results in the order of `jobs`, computed the longest first."""
     tell = progress or (lambda stage, fraction: None)
@@ -148,27 +154,23 @@ def _run(
     tell("rungs", 0.0)
     found: dict[int, RungResult] = {}
     order = sorted(range(len(jobs)), key=lambda k: -costs[k])
-    for k, result in _computed(jobs, order, places, executor, pieces):
+    for k, result in _computed(jobs, order, task, executor):
         found[k] = result
         tell("rungs", sum(costs[j] for j in found) / sum(costs))
     return [found[k] for k in range(len(jobs))]
 
 
 def _computed(
-    jobs: list[Setup],
-    order: list[int],
-    places: tuple[float, ...],
-    executor: Executor | None,
-    pieces: Pieces | None,
+    jobs: list[Setup], order: list[int], task: Task, executor: Executor | None
 ) -> Iterator[tuple[int, RungResult]]:
     if executor is None:
         for k in order:
-            yield k, compute_rung(jobs[k], places, pieces)
+            yield k, task(jobs[k])
         return
     futures: dict[Future[RungResult], int] = {}
     try:
         for k in order:
-            futures[executor.submit(compute_rung, jobs[k], places, pieces)] = k
+            futures[executor.submit(task, jobs[k])] = k
         for future in as_completed(futures):
             yield futures[future], future.result()
     except BrokenExecutor as error:
@@ -190,8 +192,8 @@ def _assemble(
         jobs[n_ladder - 1],
         next((one for one in outcomes if not one.ok), Outcome.CONVERGED),
         output_redshifts(jobs[0]),
-        OBSERVABLES,
-        tuple(UNITS.values()),
+        results[0].observable_names,
+        results[0].observable_units,
         np.array(places),
         np.array([n for n, _ in low]),
         np.array([l for _, l in low]),
@@ -220,7 +222,7 @@ def _noise(fine: list[RungResult], coarse: list[RungResult]) -> Noise:
 
     def change(name: str) -> list[FloatArray]:
         pairs = zip(fine, coarse, strict=True)
-        return [np.log(getattr(b, name) / getattr(a, name)) for a, b in pairs]
+        return [logarithm(getattr(b, name)) - logarithm(getattr(a, name)) for a, b in pairs]
 
     def of_ratio(name: str) -> FloatArray:
         first, second = change(name)
@@ -240,11 +242,16 @@ def _envelope(values: FloatArray) -> FloatArray:
     return np.asarray(np.max([padded[k : k + len(values)] for k in range(5)], axis=0))
 
 
+def logarithm(values: FloatArray) -> FloatArray:
+    """Give ln; NaN where a value is not there, or zero (the optical depth of no range)."""
+    return np.log(np.where(values > 0.0, values, np.nan))
+
+
 def carry_all(rungs: Rungs, noise: Noise, to: float = np.inf) -> Estimates:
     """Carry everything on the rungs to an n_max beyond the longest; infinite by default."""
 
     def one(name: str) -> Estimate:
-        found = carry(rungs.n_max, np.log(getattr(rungs, name)), getattr(noise, name), to)
+        found = carry(rungs.n_max, logarithm(getattr(rungs, name)), getattr(noise, name), to)
         return Estimate(np.exp(found.value), found.bar, found.exponent, found.fitted.astype(int))
 
     return Estimates(*(one(field.name) for field in dataclasses.fields(Estimates)))

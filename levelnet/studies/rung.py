@@ -18,7 +18,7 @@ from typing import NamedTuple
 import numpy as np
 
 from ..arrays import FloatArray
-from ..background.last_scattering import IONIZED_K, observe
+from ..background.last_scattering import IONIZED_K, Observed, observe
 from ..background.quadrature import quadrature
 from ..errors import Outcome, SolveError
 from ..history.cost import table_tolerance
@@ -42,8 +42,10 @@ class RungResult(NamedTuple):
     ----------
     electron_fraction, matter_temperature_k : ndarray, shape (n_redshift,)
         n_e/n_H and T_m in K.
+    observable_names, observable_units : tuple of str, length n_observables
+        As in :class:`levelnet.background.last_scattering.Observed`.
     observable : ndarray, shape (n_observables,)
-        In the order and units of `OBSERVABLES`; NaN where the grid does not reach the event.
+        In these units; NaN where the grid does not reach the event.
     population : ndarray, shape (n_population_redshift, n_low_levels)
         Atoms per hydrogen nucleus in the levels up to n = LOW_N.
     outcome : Outcome
@@ -52,6 +54,8 @@ class RungResult(NamedTuple):
 
     electron_fraction: FloatArray
     matter_temperature_k: FloatArray
+    observable_names: tuple[str, ...]
+    observable_units: tuple[str, ...]
     observable: FloatArray
     population: FloatArray
     outcome: Outcome
@@ -70,7 +74,10 @@ def rung_setup(setup: Setup, n_max: int, resolve_l_to: int | None, relative: flo
 
 
 def compute_rung(
-    setup: Setup, population_redshift: tuple[float, ...], pieces: Pieces | None
+    setup: Setup,
+    population_redshift: tuple[float, ...],
+    pieces: Pieces | None,
+    optical_depth_to: tuple[float, ...] = (),
 ) -> RungResult:
     """Compute one rung: the task of a worker.
 
@@ -82,6 +89,8 @@ def compute_rung(
         Output redshifts at which the populations are solved.
     pieces : Pieces or None
         Where reduced networks are kept.
+    optical_depth_to : tuple of float, dimensionless
+        Redshifts Z for optical_depth(Z).
 
     Raises
     ------
@@ -94,22 +103,28 @@ def compute_rung(
         outcome = _outcome(setup, integrated)
         redshift = integrated.redshift
         states = np.array([state_at(integrated, s) for s in (-np.log1p(redshift)).tolist()])
+        seen = observed(setup, integrated, optical_depth_to)
         radiation_k = setup.cosmology.radiation_temperature_k(redshift)
         return RungResult(
             np.array([ionized_and_neutral(u)[0] for u in states[:, 0].tolist()]),
             radiation_k * np.exp(states[:, 1]),
-            observables(setup, integrated),
+            seen.names,
+            seen.units,
+            seen.value,
             _low_populations(integrated, population_redshift),
             outcome,
         )
 
 
-def observables(setup: Setup, integrated: Integrated) -> FloatArray:
-    """Values of `OBSERVABLES`, in their units; integrals start where the integration does."""
-    cosmology, first = setup.cosmology, -math.log1p(integrated.handover.redshift)
-    grid = quadrature(cosmology, first, -math.log1p(float(integrated.redshift[-1])))
+def observed(setup: Setup, integrated: Integrated, optical_depth_to: tuple[float, ...]) -> Observed:
+    """What an observer makes of the history; integrals start where the integration does."""
+    redshift = integrated.redshift
+    start = max(integrated.handover.redshift, float(redshift[0]))
+    ends = -math.log1p(start), -math.log1p(float(redshift[-1]))
+    grid = quadrature(setup.cosmology, *ends)
     electrons = electron_fraction_at(integrated, grid.points)
-    return observe(cosmology, grid, electrons, integrated.equations.scales.thomson).value
+    thomson = integrated.equations.scales.thomson
+    return observe(setup.cosmology, grid, electrons, thomson, optical_depth_to)
 
 
 def _outcome(setup: Setup, integrated: Integrated) -> Outcome:
