@@ -17,7 +17,7 @@ if TYPE_CHECKING:
 def level_values(study: LevelStudy, found: Verdict, met: Demands | None = None) -> dict[str, Any]:
     """Collect a study, whole, with its verdict on x_e and, where asked, on a requirement."""
     from ..studies.level_requirement import demands_text
-    from ..studies.verdict import rung_errors, verdict_text
+    from ..studies.verdict import rung_errors, shell_changes, verdict_text
 
     held, rungs = study.held_out, study.rungs
     return {
@@ -37,7 +37,12 @@ def level_values(study: LevelStudy, found: Verdict, met: Demands | None = None) 
         "held_out": None
         if held is None
         else {"n_max": held.n_max, "foreseen": _plain(held.foreseen), **_held_out_figures(study)},
-        "resolved": None if study.resolved is None else _plain_rungs(study.resolved),
+        "resolved": None
+        if study.resolved is None
+        else {
+            **_plain_rungs(study.resolved),
+            "largest_change": shell_changes(study, found.low, found.high),
+        },
         "verdict": {
             **dataclasses.asdict(found),
             "text": verdict_text(found, int(rungs.n_max[-1])),
@@ -79,12 +84,32 @@ def level_summary(study: LevelStudy, found: Verdict, met: Demands | None = None)
         "",
     ]
     body = [row("verdict", verdict_text(found, int(study.rungs.n_max[-1])))]
+    if study.resolved is not None:
+        head += [*_resolved_lines(study, found), ""]
     if met is not None:
         head += [*_demand_lines(study, met), ""]
         body.append(row("verdict", demands_text(met, int(study.rungs.n_max[-1]))))
     return "\n".join(
         [*head, *body, *_check_lines(study), *(row("note", text) for text in study.notes)]
     )
+
+
+def _resolved_lines(study: LevelStudy, found: Verdict) -> list[str]:
+    """What whole shells above some n do to x_e of the longest rung."""
+    from ..studies.verdict import shell_changes
+
+    assert study.resolved is not None
+    changes = shell_changes(study, found.low, found.high)
+    head = ("l resolved up to", f"change of x_e, {found.low:g} < z < {found.high:g}")
+    body = [
+        (f"n = {top}", f"{change:+.2e}")
+        for top, change in zip(study.resolved.resolve_l_to.tolist(), changes, strict=True)
+    ]
+    longest = study.rungs.n_max[-1]
+    return [
+        f"whole shells in place of levels, n_max = {longest}: largest relative change",
+        *aligned([head, *body], right=True),
+    ]
 
 
 def _demand_lines(study: LevelStudy, met: Demands) -> list[str]:

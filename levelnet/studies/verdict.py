@@ -90,6 +90,20 @@ def rung_errors(study: LevelStudy, low: float, high: float) -> FloatArray:
     return np.array([np.max(np.abs(error) + bar) for error, bar in pairs])
 
 
+def shell_changes(study: LevelStudy, low: float, high: float) -> FloatArray:
+    """Largest relative change of x_e, with its sign, by the whole shells of each resolved rung.
+
+    Between two redshifts (dimensionless), against the longest rung with every level of its own.
+    """
+    if study.resolved is None:
+        return np.empty(0)
+    inside = outputs_between(study.redshift, 1.0, low, high)
+    whole = study.rungs.free_electron_fraction[-1, inside]
+    changes = study.resolved.free_electron_fraction[:, inside] / whole - 1.0
+    worst = np.argmax(np.abs(changes), axis=1)
+    return np.asarray(changes[np.arange(len(worst)), worst])
+
+
 def outputs_between(redshift: FloatArray, within: float, low: float, high: float) -> IntArray:
     """Which outputs lie between two redshifts; InputError where the question makes no sense."""
     if not _LEAST < within <= 1.0:

@@ -15,14 +15,21 @@ from levelnet.errors import InputError, Outcome, SolveError
 from levelnet.history.run import solve
 from levelnet.history.setup import Accuracy, Setup
 from levelnet.pieces import MemoryPieces
+from levelnet.studies.level_requirement import (
+    check_covered,
+    demands,
+    demands_text,
+    depths_asked,
+)
 from levelnet.studies.levels import (
     check_ladder,
     default_rungs,
     level_study,
     n_held_out,
 )
+from levelnet.studies.requirement import Requirement, parse_requirement
 from levelnet.studies.rung import rung_setup
-from levelnet.studies.verdict import rung_errors, verdict, verdict_text
+from levelnet.studies.verdict import rung_errors, shell_changes, verdict, verdict_text
 from tests.small_levels import RUNGS, level_setup, small_study
 from tests.small_runs import small_setup
 from tests.unit.test_store_table import assert_same
@@ -197,6 +204,71 @@ def test_verdict_is_about_the_worst_redshift() -> None:
 def test_verdicts_that_make_no_sense(within: float, low: float, high: float, message: str) -> None:
     with pytest.raises(InputError, match=message):
         verdict(small_study(), within, low, high)
+
+
+def test_whole_shells_have_rungs_of_their_own() -> None:
+    # Against the whole solver; l-resolution matters, more so late (Grin & Hirata 2010; Chluba,
+    # Vasil & Dursi 2010), and whole shells take x_e down, since they let every atom of a shell
+    # reach p levels.
+    study = level_study(level_setup(6), (4, 6, 8, 11), resolve=(5, 8))
+    resolved = study.resolved
+    assert resolved is not None
+    assert resolved.n_max.tolist() == [11, 11]
+    assert resolved.resolve_l_to.tolist() == [5, 8]
+    history = solve(rung_setup(level_setup(6), 11, 5, 1e-8))
+    seen = resolved.free_electron_fraction[0]
+    assert seen == pytest.approx(history.free_electron_fraction, rel=1e-12)
+    few, many = shell_changes(study, 200.0, 1600.0)
+    assert few < many < 0.0
+    assert shell_changes(study, 1300.0, 1600.0)[0] > few
+    assert shell_changes(small_study(), 200.0, 1600.0).size == 0
+
+
+def test_optical_depths_are_observables() -> None:
+    setup = small_setup(4, 200.0, 6)
+    study = level_study(setup, (4, 5, 6, 7), optical_depth_to=(1000.0, 200.0))
+    assert study.observable_names[-2:] == ("optical_depth(1000)", "optical_depth(200)")
+    assert np.all(np.diff(study.rungs.observable[:, -2]) < 0.0)
+    # From z = 200 up to there: nothing, and so no logarithm.
+    assert np.all(study.rungs.observable[:, -1] == 0.0)
+    assert np.isnan(study.limit.observable.value[-1])
+    assert study.limit.observable.fitted[-1] == 0
+
+
+def requirement(text: str) -> Requirement:
+    return parse_requirement(text)
+
+
+def test_smallest_n_max_for_a_requirement() -> None:
+    # A range alone must give what the verdict on x_e gives, at the outputs it shares.
+    study = small_study()
+    low, high = float(study.redshift[-2]), float(study.redshift[3])
+    asked = requirement(
+        f"[[ranges]]\nquantity = 'x_e'\nredshift = [{low}, {high}]\nrelative = 0.2\n"
+    )
+    found = demands(study, asked)
+    assert found.n_max == verdict(study, 0.2, low, high).n_max
+    passed = [rung[0].passed for rung in found.rungs]
+    assert passed == (rung_errors(study, low, high) <= 0.2).tolist()
+    assert demands_text(found, RUNGS[-1]).startswith(f"for the requirement: n_max = {found.n_max}")
+    # Two demands: the harder one decides.
+    more = requirement(
+        f"[observables]\nz_drag = 1e-4\n[[ranges]]\nquantity = 'x_e'\n"
+        f"redshift = [{low}, {high}]\nrelative = 0.2\n"
+    )
+    both = demands(study, more)
+    assert both.n_max is None or found.n_max is None or both.n_max >= found.n_max
+    out_of_reach = demands(study, requirement("[observables]\nk_D = 1e-9\n"))
+    assert out_of_reach.n_max is None
+    assert "not known from these rungs" in demands_text(out_of_reach, RUNGS[-1])
+
+
+def test_requirement_must_be_covered() -> None:
+    redshift = small_study().redshift
+    check_covered(requirement("[observables]\n'x_e(900)' = 1e-3\nz_drag = 1e-3\n"), redshift)
+    with pytest.raises(InputError, match=r"x_e\(100\) lies outside the redshifts of the study"):
+        check_covered(requirement("[observables]\n'x_e(100)' = 1e-3\n"), redshift)
+    assert depths_asked(requirement("[observables]\n'tau(900)' = 1e-3\nr_s = 0.1\n")) == (900.0,)
 
 
 def test_notes_say_which_lines_escape() -> None:

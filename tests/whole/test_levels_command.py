@@ -32,6 +32,7 @@ def folder(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Path:
 
 
 def test_study_from_setup_to_verdict(folder: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    (folder / "asked.toml").write_text("[observables]\nz_drag = 0.01\n'tau(1000)' = 0.2\n")
     words = [
         "levels",
         "good.toml",
@@ -42,11 +43,15 @@ def test_study_from_setup_to_verdict(folder: Path, capsys: pytest.CaptureFixture
         "figures",
         "--workers",
         "1",
+        "--requirement",
+        "asked.toml",
     ]
     assert main([*words, "--quiet"]) == 0
     said = capsys.readouterr().out
     assert "for 20 % in x_e at 400 < z < 1600: n_max = " in said
     assert "foreseen from rungs up to 10" in said
+    assert "for the requirement: n_max = " in said
+    assert "optical_depth(1000)" in said
     study = levelnet.read("good-levels.h5")
     assert isinstance(study, LevelStudy)
     assert study.rungs.n_max.tolist() == [4, 5, 6, 8, 10, 12]
@@ -60,7 +65,7 @@ def test_study_from_setup_to_verdict(folder: Path, capsys: pytest.CaptureFixture
     start = time.monotonic()
     assert main(words) == 2
     assert "already exists" in capsys.readouterr().err
-    assert main([*words[:-4], "--output", "other.h5", "--plot", "figures"]) == 2
+    assert main([*words, "--output", "other.h5"]) == 2
     assert "exists already" in capsys.readouterr().err
     assert time.monotonic() - start < 5.0
 
@@ -93,6 +98,8 @@ def test_study_from_setup_to_verdict(folder: Path, capsys: pytest.CaptureFixture
         (["--rungs", "4,5,6,8", "--workers", "0"], "--workers = 0"),
         (["--rungs", "4,5,6,8", "--output", "no/such/x.h5"], "does not exist"),
         (["--rungs", "4,5,6,8", "--plot", "good.toml"], "is a file, not a folder"),
+        (["--requirement", "none.toml"], "none.toml: cannot be read"),
+        (["--requirement", "good.toml"], "unknown key"),
         ([], "a ladder with 1 rung"),  # n_max = 4 of the setup
     ],
 )
