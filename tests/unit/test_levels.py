@@ -29,7 +29,13 @@ from levelnet.studies.levels import (
 )
 from levelnet.studies.requirement import Requirement, parse_requirement
 from levelnet.studies.rung import rung_setup
-from levelnet.studies.verdict import rung_errors, shell_changes, verdict, verdict_text
+from levelnet.studies.verdict import (
+    population_changes,
+    rung_errors,
+    shell_changes,
+    verdict,
+    verdict_text,
+)
 from tests.small_levels import RUNGS, level_setup, small_study
 from tests.small_runs import small_setup
 from tests.unit.test_store_table import assert_same
@@ -68,6 +74,12 @@ def test_more_levels_recombine_more() -> None:
         study.limit.free_electron_fraction.value[late]
         < study.rungs.free_electron_fraction[-1, late]
     )
+
+
+def test_populations_approach_those_of_the_longest_rung() -> None:
+    changes = population_changes(small_study())
+    assert np.all(np.diff(changes) < 0.0)
+    assert changes[-1] == 0.0
 
 
 def test_bits_do_not_depend_on_workers_or_pieces() -> None:
