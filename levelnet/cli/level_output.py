@@ -17,7 +17,12 @@ if TYPE_CHECKING:
 def level_values(study: LevelStudy, found: Verdict, met: Demands | None = None) -> dict[str, Any]:
     """Collect a study, whole, with its verdict on x_e and, where asked, on a requirement."""
     from ..studies.level_requirement import demands_text
-    from ..studies.verdict import rung_errors, shell_changes, verdict_text
+    from ..studies.verdict import (
+        population_changes,
+        rung_errors,
+        shell_changes,
+        verdict_text,
+    )
 
     held, rungs = study.held_out, study.rungs
     return {
@@ -28,6 +33,7 @@ def level_values(study: LevelStudy, found: Verdict, met: Demands | None = None) 
         "rungs": {
             **_plain_rungs(rungs),
             "largest_error": rung_errors(study, found.low, found.high),
+            "largest_population_change": population_changes(study),
         },
         "redshift": study.redshift,
         "observable_names": study.observable_names,
@@ -140,18 +146,21 @@ def _rung_lines(study: LevelStudy, found: Verdict) -> list[str]:
     """Errors of each rung against the limit: x_e with its bar, observables without."""
     import numpy as np
 
-    from ..studies.verdict import rung_errors
+    from ..studies.verdict import population_changes, rung_errors
 
     names = [_SHORT.get(name, name) for name in study.observable_names]
     errors = study.rungs.observable / study.limit.observable.value - 1.0
     largest = rung_errors(study, found.low, found.high)
-    head = ("n_max", f"x_e, {found.low:g} < z < {found.high:g}", *names)
-    body = [
-        (str(n), f"{size:.2e}", *(f"{one:+.1e}" if np.isfinite(one) else "-" for one in line))
-        for n, size, line in zip(study.rungs.n_max.tolist(), largest, errors, strict=True)
-    ]
+    populations = population_changes(study)
+    head = ("n_max", f"x_e, {found.low:g} < z < {found.high:g}", "n = 2 to 4", *names)
+    body = []
+    for k, n in enumerate(study.rungs.n_max.tolist()):
+        seen = [f"{one:+.1e}" if np.isfinite(one) else "-" for one in errors[k]]
+        body.append((str(n), f"{largest[k]:.2e}", f"{populations[k]:.1e}", *seen))
     return [
-        "relative error by truncation; of x_e the largest, error bar included",
+        "relative error by truncation; of x_e the largest, error bar included; of populations of "
+        "n = 2 to 4 the",
+        "largest difference from the longest rung at any redshift",
         *aligned([head, *body], right=True),
     ]
 

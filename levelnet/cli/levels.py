@@ -104,7 +104,7 @@ def run(options: argparse.Namespace, console: Console) -> int:
     start = time.monotonic()
     study = _study(setup, ladder, resolve, requirement, options, console)
     seconds = time.monotonic() - start
-    found = judged(study, options.within, *options.between)
+    found = judged(study, options.within, tuple(options.between))
     met = None if requirement is None else demands(study, requirement)
 
     from ..store import write
@@ -202,14 +202,17 @@ def _study(
 
 
 def judged(
-    study: LevelStudy, within: float = WITHIN, low: float | None = None, high: float | None = None
+    study: LevelStudy, within: float = WITHIN, between: tuple[float, float] | None = None
 ) -> Verdict:
     """Give the verdict; without a range, on as much of the usual one as the study covers."""
     from ..studies.verdict import verdict
 
-    low = max(BETWEEN[0], float(study.redshift[-1])) if low is None else low
-    high = min(BETWEEN[1], float(study.redshift[0])) if high is None else high
-    return verdict(study, within, low, high)
+    if between is None:
+        low, high = float(study.redshift[-1]), float(study.redshift[0])
+        between = max(BETWEEN[0], low), min(BETWEEN[1], high)
+        if between[0] >= between[1]:
+            between = low, high
+    return verdict(study, within, *between)
 
 
 def save_figures(

@@ -155,7 +155,8 @@ def _draw_by_level(axes: Axes, study: LevelStudy) -> None:
     if shown.size:  # room for the legend
         axes.set_ylim(bottom=1e-4 * float(np.min(np.abs(shown))))
     axes.set_xlabel(r"highest level $n_\mathrm{max}$")
-    axes.legend(loc="lower left", fontsize=6.5, labelspacing=0.25, handlelength=1.8)
+    if shown.size:
+        axes.legend(loc="lower left", fontsize=6.5, labelspacing=0.25, handlelength=1.8)
 
 
 def _draw_limit(axes: Axes, study: LevelStudy) -> None:
@@ -165,8 +166,10 @@ def _draw_limit(axes: Axes, study: LevelStudy) -> None:
     inverse = np.linspace(1.0 / float(rungs.n_max[-1]), 0.0, _POINTS)
     with np.errstate(divide="ignore"):
         curve, bar = _beyond(study, 1.0 / inverse)
-    # Of the curves of the other panel those where truncation matters.
-    shown = [(j, k) for j, k in enumerate(_shown_rows(study)) if study.redshift[k] <= _SLOW]
+    # Of the curves of the other panel the last, where truncation matters most.
+    shown = list(enumerate(_shown_rows(study)))
+    late = [one for one in shown if study.redshift[one[1]] <= _SLOW]
+    shown = late or shown[-1:]
     for (j, k), mark in zip(shown, "osD", strict=False):
         colour = style.SERIES[j]
         axes.plot(
@@ -181,7 +184,8 @@ def _draw_limit(axes: Axes, study: LevelStudy) -> None:
     ticks = [*rungs.n_max[-_LONGEST:].tolist(), 3 * int(rungs.n_max[-1])]
     axes.set_xticks([0.0, *(1.0 / n for n in ticks)], [r"$\infty$", *(str(n) for n in ticks)])
     axes.set_xlabel(r"$n_\mathrm{max}$, drawn as $1/n_\mathrm{max}$")
-    axes.legend(loc="upper left", fontsize=6.5)
+    if shown:
+        axes.legend(loc="upper left", fontsize=6.5)
 
 
 def _plain_ticks(axes: Axes, low: float, high: float) -> None:

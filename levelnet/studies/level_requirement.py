@@ -8,6 +8,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from ..arrays import FloatArray
+from ..errors import InputError
 from .convergence import first_to_pass, truncation_error
 from .level_records import LevelStudy
 from .levels import logarithm
@@ -40,6 +41,12 @@ class Demands:
 
 def check_covered(requirement: Requirement, redshift: FloatArray) -> None:
     """Raise InputError if outputs at these redshifts cannot answer a requirement."""
+    for depth in depths_asked(requirement):
+        if not redshift[-1] < depth <= redshift[0]:
+            raise InputError(
+                f"requirement: optical_depth({depth:g}) lies outside the redshifts of the study, "
+                f"above {redshift[-1]:g} to {redshift[0]:g}"
+            )
     nothing = np.zeros(len(redshift))
     known = {name: 0.0 for name in requirement.targets if not _from_curves(name)}
     check(requirement, redshift, nothing, nothing, known)

@@ -90,6 +90,13 @@ def rung_errors(study: LevelStudy, low: float, high: float) -> FloatArray:
     return np.array([np.max(np.abs(error) + bar) for error, bar in pairs])
 
 
+def population_changes(study: LevelStudy) -> FloatArray:
+    """Largest relative difference of any low excited level from the longest rung, of each rung."""
+    excited = study.rungs.population[:, :, study.level_n > 1]
+    changes = np.abs(excited / excited[-1] - 1.0)
+    return np.asarray(changes.max(axis=(1, 2)))
+
+
 def shell_changes(study: LevelStudy, low: float, high: float) -> FloatArray:
     """Largest relative change of x_e, with its sign, by the whole shells of each resolved rung.
 

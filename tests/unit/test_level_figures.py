@@ -15,7 +15,7 @@ from levelnet.report.levels import (
     resolve_figure,
     save_level_figures,
 )
-from levelnet.studies.level_records import LevelStudy
+from levelnet.studies.level_records import Estimate, LevelStudy
 from tests.small_levels import RUNGS, small_study
 
 
@@ -65,6 +65,25 @@ def test_resolved_rungs_are_held_against_the_longest() -> None:
     expected = np.abs(first / study.rungs.free_electron_fraction[-1] - 1.0)
     seen = np.isfinite(drawn)
     assert drawn[seen] == pytest.approx(expected[seen])
+
+
+def test_study_without_any_law_is_drawn() -> None:
+    # As far above recombination, where all rungs agree; a warning would fail the test.
+    study = small_study()
+    one = study.limit.free_electron_fraction
+    nothing = Estimate(
+        study.rungs.free_electron_fraction[-1],
+        one.relative_error,
+        np.full_like(one.exponent, np.nan),
+        np.zeros_like(one.fitted),
+    )
+    limit = dataclasses.replace(study.limit, free_electron_fraction=nothing)
+    bare = dataclasses.replace(study, limit=limit)
+    by_level, near, _ = level_figure(bare).axes
+    assert not by_level.lines
+    assert by_level.get_legend() is None
+    assert near.get_legend() is None
+    check_figure(bare)
 
 
 def test_files_are_whole_and_the_same_each_time(tmp_path: Path) -> None:

@@ -29,7 +29,13 @@ from levelnet.studies.levels import (
 )
 from levelnet.studies.requirement import Requirement, parse_requirement
 from levelnet.studies.rung import rung_setup
-from levelnet.studies.verdict import rung_errors, shell_changes, verdict, verdict_text
+from levelnet.studies.verdict import (
+    population_changes,
+    rung_errors,
+    shell_changes,
+    verdict,
+    verdict_text,
+)
 from tests.small_levels import RUNGS, level_setup, small_study
 from tests.small_runs import small_setup
 from tests.unit.test_store_table import assert_same
@@ -68,6 +74,12 @@ def test_more_levels_recombine_more() -> None:
         study.limit.free_electron_fraction.value[late]
         < study.rungs.free_electron_fraction[-1, late]
     )
+
+
+def test_populations_approach_those_of_the_longest_rung() -> None:
+    changes = population_changes(small_study())
+    assert np.all(np.diff(changes) < 0.0)
+    assert changes[-1] == 0.0
 
 
 def test_bits_do_not_depend_on_workers_or_pieces() -> None:
@@ -220,17 +232,17 @@ def test_whole_shells_have_rungs_of_their_own() -> None:
     assert seen == pytest.approx(history.free_electron_fraction, rel=1e-12)
     few, many = shell_changes(study, 200.0, 1600.0)
     assert few < many < 0.0
-    assert shell_changes(study, 1300.0, 1600.0)[0] > few
+    assert shell_changes(study, 1000.0, 1600.0)[0] > few
     assert shell_changes(small_study(), 200.0, 1600.0).size == 0
 
 
 def test_optical_depths_are_observables() -> None:
     setup = small_setup(4, 200.0, 6)
-    study = level_study(setup, (4, 5, 6, 7), optical_depth_to=(1000.0, 200.0))
-    assert study.observable_names[-2:] == ("optical_depth(1000)", "optical_depth(200)")
+    study = level_study(setup, (4, 5, 6, 7), optical_depth_to=(1000.0, 9000.0))
+    assert study.observable_names[-2:] == ("optical_depth(1000)", "optical_depth(9000)")
     assert np.all(np.diff(study.rungs.observable[:, -2]) < 0.0)
-    # From z = 200 up to there: nothing, and so no logarithm.
-    assert np.all(study.rungs.observable[:, -1] == 0.0)
+    # Above the history there is none, and no law of it.
+    assert np.all(np.isnan(study.rungs.observable[:, -1]))
     assert np.isnan(study.limit.observable.value[-1])
     assert study.limit.observable.fitted[-1] == 0
 
@@ -268,6 +280,9 @@ def test_requirement_must_be_covered() -> None:
     check_covered(requirement("[observables]\n'x_e(900)' = 1e-3\nz_drag = 1e-3\n"), redshift)
     with pytest.raises(InputError, match=r"x_e\(100\) lies outside the redshifts of the study"):
         check_covered(requirement("[observables]\n'x_e(100)' = 1e-3\n"), redshift)
+    for depth in (100, 200, 5000):  # at the end of the grid there is nothing to integrate
+        with pytest.raises(InputError, match=rf"optical_depth\({depth}\) lies outside"):
+            check_covered(requirement(f"[observables]\n'tau({depth})' = 1e-3\n"), redshift)
     assert depths_asked(requirement("[observables]\n'tau(900)' = 1e-3\nr_s = 0.1\n")) == (900.0,)
 
 

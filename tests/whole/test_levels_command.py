@@ -5,6 +5,7 @@ What is expected is the project's own contract, as in test_command_line.py.
 
 from __future__ import annotations
 
+import dataclasses
 import json
 import os
 import signal
@@ -13,11 +14,14 @@ import sys
 import time
 from pathlib import Path
 
+import numpy as np
 import pytest
 
 import levelnet
+from levelnet.cli.levels import judged
 from levelnet.cli.main import main
 from levelnet.studies.level_records import LevelStudy
+from tests.small_levels import small_study
 from tests.whole.test_command_line import GOOD, environment
 
 LADDER = ("--rungs", "4,5,6,8,10,12", "--between", "400", "1600")
@@ -114,6 +118,14 @@ def test_complaints_are_one_line(
     assert message in said.err
     assert [path.name for path in folder.iterdir()] == ["good.toml"]
     assert time.monotonic() - start < 5.0
+
+
+def test_verdict_of_a_file_is_on_what_it_covers() -> None:
+    study = small_study()
+    assert (judged(study).low, judged(study).high) == (200.0, 1600.0)
+    assert judged(study, between=(900.0, 1000.0)).low == 900.0
+    early = dataclasses.replace(study, redshift=np.linspace(3000.0, 2600.0, len(study.redshift)))
+    assert (judged(early).low, judged(early).high) == (2600.0, 3000.0)
 
 
 def test_interrupt_leaves_no_file(folder: Path) -> None:
