@@ -58,8 +58,8 @@ UNITS = {
 """Unit of each observable; "1" where there is none, Mpc comoving."""
 OBSERVABLES = tuple(UNITS)
 """Names of the observables, besides optical_depth(Z)."""
-IONIZED_K = 7000.0
-"""T_r in K from which integrals over a history may start: 1.4e-8 of hydrogen is neutral there."""
+# T_r from which integrals over a history may start: 1.4e-8 of hydrogen is neutral there.
+_IONIZED_K = 7000.0
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -100,6 +100,11 @@ class Observed:
 def at_redshift(quantity: str, redshift: float) -> str:
     """Name of a quantity at a redshift (dimensionless): "x_e(900)", "optical_depth(1100.5)"."""
     return f"{quantity}({repr(float(redshift)).removesuffix('.0')})"
+
+
+def ionized_redshift(cosmology: Cosmology) -> float:
+    """Redshift (dimensionless) above which hydrogen is ionized to 1e-8: integrals start there."""
+    return _IONIZED_K / cosmology.cmb_temperature_k - 1.0
 
 
 def observe(

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import argparse
-import dataclasses
 import time
 from pathlib import Path
 from typing import TYPE_CHECKING
@@ -86,10 +85,10 @@ def run(options: argparse.Namespace, console: Console) -> int:
     setup = load_setup(options.setup)
     asked = [parse_target(text).name for text in options.of or default_targets(setup)]
     targets = tuple(dict.fromkeys(asked))
-    every = tuple(dict.fromkeys((*targets, *band_targets(setup, _band(options)))))
-    _check_places(options, targets, every)
+    band = tuple(band_targets(setup, _band(options)))
+    _check_places(options, targets, (*targets, *band))
     start = time.monotonic()
-    weighing = _weighed(setup, every, len(targets), options, console)
+    weighing = _weighed(setup, targets, band, options, console)
     seconds = time.monotonic() - start
     written = _write(weighing, options, console)
     if options.json:
@@ -159,27 +158,25 @@ def band_targets(setup: Setup, count: int) -> list[str]:
 def _weighed(
     setup: Setup,
     targets: tuple[str, ...],
-    n_asked: int,
+    band: tuple[str, ...],
     options: argparse.Namespace,
     console: Console,
 ) -> Weighing:
-    """Weigh all targets; the first `n_asked` were asked for, the rest is the budget's band."""
-    from ..studies.budget import error_budget, uncertainties_in
+    """Weigh the targets, and budget their errors and those of the band."""
+    from ..studies.budget import uncertainties_in
     from ..studies.weigh import weigh
+    from ..studies.weigh_budget import weigh_with_budget
 
-    uncertainties = (
-        () if options.no_budget else uncertainties_in(setup.atom_size, options.uncertainties)
-    )
+    if not options.no_budget:
+        uncertainties = uncertainties_in(setup.atom_size, options.uncertainties)
     announce_cost(setup, console, _HISTORIES)
     pieces = None if options.no_cache else cache_pieces(console)
     with console.progress() as progress:
-        weighing = weigh(setup, targets, progress=progress, pieces=pieces)
-    if options.no_budget:
-        return weighing
-    # The band has served once its errors are known: derivatives by every rate are kept for what
-    # was asked for.
-    budget = error_budget(weighing, uncertainties)
-    return dataclasses.replace(weighing.first(n_asked), budget=budget)
+        if options.no_budget:
+            return weigh(setup, targets, progress=progress, pieces=pieces)
+        return weigh_with_budget(
+            setup, targets, band, uncertainties, progress=progress, pieces=pieces
+        )
 
 
 def _write(weighing: Weighing, options: argparse.Namespace, console: Console) -> list[Path]:

@@ -73,12 +73,14 @@ def table_tolerance(setup: Setup) -> float:
     return max(0.01 * setup.accuracy.relative, 1e-11)
 
 
-def check_memory(setup: Setup, copies: int = 1) -> Cost:
+def check_memory(setup: Setup, copies: int = 1, more_bytes: float = 0.0) -> Cost:
     """Estimate the cost; InputError with the figure if it cannot fit or n_max is out of range.
 
-    With `copies` worker processes, each of which holds an atom of its own, all must fit at once.
+    With `copies` worker processes, each of which holds an atom of its own, all must fit at once;
+    `more_bytes` is what else the caller will hold.
     """
     cost = estimate(setup)
+    cost = Cost(cost.memory_bytes + more_bytes, cost.seconds)
     available = available_memory_bytes()
     n = setup.hydrogen.n_max
     needed = copies * cost.memory_bytes

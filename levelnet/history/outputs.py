@@ -17,7 +17,7 @@ from ..atomic.physics import Scales
 from ..background.conditions import Conditions
 from ..background.quadrature import quadrature
 from ..background.scattering import opacity_per_mpc
-from ..errors import Outcome, SolveError
+from ..errors import SolveError
 from ..network.assembly import (
     FactoredInterior,
     Workspace,
@@ -27,10 +27,10 @@ from ..network.assembly import (
 from ..network.populations import LevelPopulations, populations
 from ..network.tabulation import TabulatedReduction
 from ..numerics.stepping import Trajectory
-from .cost import table_tolerance
 from .equations import Local, SlowEquations, ionized_and_neutral
 from .integrate import Integrated, Progress
 from .observables import milestones, optical_depth
+from .outcome import outcome_of, relaxation_hubble
 from .result import (
     Channels,
     Diagnostics,
@@ -43,8 +43,6 @@ from .setup import Setup
 from .start import equilibrium_state
 
 _SMALLEST_LOG = math.log(1e-300)
-SLOW_RELAXATION = 100.0
-"""Relaxation over Hubble rate of the kept levels below which "quasi-steady" is doubtful."""
 
 
 class _Output(NamedTuple):
@@ -71,12 +69,7 @@ def assemble_history(
         raise SolveError(trajectory.outcome.value, outcome=trajectory.outcome)
     outputs = _outputs(integrated, redshift, tell)
     slowest = min((o.relaxation_hubble for o in outputs), default=math.inf)
-    reduced, outcome = integrated.equations.reduced, trajectory.outcome
-    if outcome.ok and isinstance(reduced, TabulatedReduction):
-        if reduced.interpolation_error > table_tolerance(setup):
-            outcome = Outcome.TABLE_TOO_COARSE
-    if outcome.ok and slowest < SLOW_RELAXATION:
-        outcome = Outcome.QUASI_STEADY_LOST
+    outcome = outcome_of(setup, integrated, [slowest])
     conditions = [o.local.conditions for o in outputs]
     electron_fraction = np.array([c.electron_fraction for c in conditions])
     hydrogen_cm3 = np.array([c.hydrogen_density_cm3 for c in conditions])
@@ -124,7 +117,7 @@ def _outputs(integrated: Integrated, redshift: FloatArray, tell: Progress) -> li
     found = []
     for k, z in enumerate(redshift.tolist()):
         local, factored, levels = solve_levels(integrated, z, work)
-        relaxation = local.solution.slowest_relaxation() / local.conditions.hubble_rate_per_s
+        relaxation = relaxation_hubble(local)
         found.append(_Output(local, levels, _lost_per_s(factored), relaxation))
         tell("level populations", (k + 1) / len(redshift))
     return found

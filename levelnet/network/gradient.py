@@ -59,6 +59,8 @@ class FlowGradient(NamedTuple):
         By ln R_ij, one direction.
     loss : ndarray, shape (n_kept, n_kept), dimensionless
         By K_ij, its source with it.
+    channel : ndarray, shape (n_kept,)
+        By ln of a common factor on all that leads from level i to the ground state and back.
     """
 
     capture: FloatArray
@@ -67,6 +69,7 @@ class FlowGradient(NamedTuple):
     lift: FloatArray
     exchange: FloatArray
     loss: FloatArray
+    channel: FloatArray
 
 
 def less(gradient: FlowGradient, share: float, other: FlowGradient) -> FlowGradient:
@@ -147,6 +150,7 @@ def _gradient(
         -fate * solution.lift,
         -rates.exchange * d[:, None] * gain,
         np.multiply.outer(kept_back, d),
+        kept_back * solution.flow,
     )
 
 

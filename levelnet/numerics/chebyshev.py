@@ -54,7 +54,7 @@ class ChebyshevSeries:
         values: FloatArray = idct(scaled, type=2, axis=0)[::-1]
         return values
 
-    def node_weights(self, x: FloatArray) -> FloatArray:
+    def interpolation_weights(self, x: FloatArray) -> FloatArray:
         """Weight of the value at each node in the interpolated value at each `x` inside.
 
         Parameters

@@ -90,13 +90,18 @@ class Collocated(Generic[Here]):
     @property
     def times(self) -> FloatArray:
         """Times of the stages, shape (n_steps, 3)."""
-        times: FloatArray = self.edges[:-1, None] + self.steps[:, None] * NODES
-        return times
+        return stage_times(self.edges)
 
     def state_at(self, edge: int) -> FloatArray:
         """State at one edge, shape (n,)."""
         state: FloatArray = self.start if edge == 0 else self.stages[edge - 1, 2]
         return state
+
+
+def stage_times(edges: FloatArray) -> FloatArray:
+    """Times of the stages between `edges`, shape (n_steps, 3)."""
+    times: FloatArray = edges[:-1, None] + np.diff(edges)[:, None] * NODES
+    return times
 
 
 def collocate(

@@ -16,7 +16,7 @@ from ..history.integrate import Integrated, Progress, integrate_history
 from ..history.setup import Setup
 from ..history.start import equilibrium_state
 from ..network.tabulation import TabulatedReduction
-from ..numerics.collocation import Collocated, Linear, collocate
+from ..numerics.collocation import Collocated, Linear, collocate, stage_times
 from ..pieces import Pieces
 
 # The integration starts this far in 1 + z above the highest redshift asked for, so that the start
@@ -107,7 +107,7 @@ def freeze(
 def on_steps(setup: Setup, integrated: Integrated, edges: FloatArray) -> FrozenHistory:
     """Solve the equations of a run by collocation on given steps (ends in ln a)."""
     curve = CubicSpline(integrated.trajectory.time, integrated.trajectory.state)
-    guess = curve(Collocated(edges, np.zeros(2), np.zeros(0), []).times)
+    guess = curve(stage_times(edges))
     equations = integrated.equations
     start, _ = equilibrium_state(equations, float(edges[0]))
 

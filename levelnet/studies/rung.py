@@ -18,16 +18,15 @@ from typing import NamedTuple
 import numpy as np
 
 from ..arrays import FloatArray
-from ..background.last_scattering import IONIZED_K, Observed, observe
+from ..background.last_scattering import Observed, ionized_redshift, observe
 from ..background.quadrature import quadrature
 from ..errors import Outcome, SolveError
-from ..history.cost import table_tolerance
 from ..history.equations import ionized_and_neutral
 from ..history.integrate import Integrated, integrate_history
+from ..history.outcome import outcome_of, relaxation_hubble
 from ..history.outputs import electron_fraction_at, solve_levels, state_at
 from ..history.setup import Setup
 from ..network.assembly import Workspace
-from ..network.tabulation import TabulatedReduction
 from ..numerics.threads import one_blas_thread
 from ..pieces import Pieces
 
@@ -98,11 +97,17 @@ def compute_rung(
         If the run ended before its last output.
     """
     with one_blas_thread():
-        ionized = IONIZED_K / setup.cosmology.cmb_temperature_k - 1.0  # observables start there
+        ionized = ionized_redshift(setup.cosmology)  # observables start there
         integrated = integrate_history(setup, lambda *_: None, pieces, start_above=ionized)
-        outcome = _outcome(setup, integrated)
+        if not integrated.trajectory.outcome.ok:
+            outcome = integrated.trajectory.outcome
+            text = f"rung n_max = {setup.hydrogen.n_max}: {outcome.value}"
+            raise SolveError(text, outcome=outcome)
         redshift = integrated.redshift
-        states = np.array([state_at(integrated, s) for s in (-np.log1p(redshift)).tolist()])
+        times = (-np.log1p(redshift)).tolist()
+        states = np.array([state_at(integrated, s) for s in times])
+        here = (integrated.equations.local(s, y) for s, y in zip(times, states, strict=True))
+        outcome = outcome_of(setup, integrated, map(relaxation_hubble, here))
         seen = observed(setup, integrated, optical_depth_to)
         radiation_k = setup.cosmology.radiation_temperature_k(redshift)
         return RungResult(
@@ -125,16 +130,6 @@ def observed(setup: Setup, integrated: Integrated, optical_depth_to: tuple[float
     electrons = electron_fraction_at(integrated, grid.points)
     thomson = integrated.equations.scales.thomson
     return observe(setup.cosmology, grid, electrons, thomson, optical_depth_to)
-
-
-def _outcome(setup: Setup, integrated: Integrated) -> Outcome:
-    outcome = integrated.trajectory.outcome
-    if not outcome.ok:
-        raise SolveError(f"rung n_max = {setup.hydrogen.n_max}: {outcome.value}", outcome=outcome)
-    if isinstance(integrated.measured, TabulatedReduction):
-        if integrated.measured.interpolation_error > table_tolerance(setup):
-            return Outcome.TABLE_TOO_COARSE
-    return outcome
 
 
 def _low_populations(integrated: Integrated, redshift: tuple[float, ...]) -> FloatArray:

@@ -31,7 +31,7 @@ from .targets import Target
 
 
 @dataclass(frozen=True, slots=True, eq=False)
-class LineStrength:
+class NetTransitions:
     """Net transitions in one line, summed over the history; n_points = 3 n_steps stages.
 
     The strength is the integral of flow/F over the change of x_HI, with F the net flow to the
@@ -74,14 +74,14 @@ class Scalars:
         dJ by the states at the stages.
     by_parameter : ndarray, shape (n_scalars, 6)
         dJ by each parameter of the cosmology, states held.
-    lines : tuple of LineFlow
+    lines : tuple of NetTransitions
         Line strengths among the scalars, which hang on the rates directly.
     """
 
     value: FloatArray
     by_state: FloatArray
     by_parameter: FloatArray
-    lines: tuple[LineStrength, ...]
+    lines: tuple[NetTransitions, ...]
 
 
 def scalars_of(history: FrozenHistory, targets: Sequence[Target]) -> Scalars:
@@ -148,7 +148,7 @@ def _put_observables(history: FrozenHistory, targets: Sequence[Target], made: Sc
         made.by_state[k, :, 2, 0] += moved[1:]
 
 
-def _put_line(history: FrozenHistory, target: Target, k: int, made: Scalars) -> LineStrength:
+def _put_line(history: FrozenHistory, target: Target, k: int, made: Scalars) -> NetTransitions:
     """Put one line strength; what it hangs on directly is returned."""
     kept = list(history.equations.reduced.kept)
     upper = kept.index(target.upper)
@@ -171,7 +171,7 @@ def _put_line(history: FrozenHistory, target: Target, k: int, made: Scalars) -> 
         made.value[k] += WEIGHTS @ (share * gain.value)
         _put_gain(made.by_state[k, :, :, 0], j, WEIGHTS * share, gain)
     ends = None if lower is None else (upper, lower)
-    return LineStrength(k, np.array(weight), gradients, slopes, np.array(own_slope), ends)
+    return NetTransitions(k, np.array(weight), gradients, slopes, np.array(own_slope), ends)
 
 
 class _Gain(NamedTuple):

@@ -16,7 +16,7 @@ from ..history.equations import Linearized
 from ..network.gradient import FlowGradient, FlowSlopes
 from ..network.reduction import WARM_K, beyond_doubles, exchange_pairs
 from .frozen import FrozenHistory
-from .scalars import LineStrength
+from .scalars import NetTransitions
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -56,7 +56,7 @@ def stage_rates(history: FrozenHistory) -> StageRates:
     scale = np.array(
         [-1.0 / (c.hubble_rate_per_s * c.ionized_fraction * c.ground_fraction) for c in conditions]
     )
-    channels = np.array([channel_derivatives(one, one.gradient) for one in here])
+    channels = np.array([one.gradient.channel for one in here])
     compton = np.array([one.rate[1] + 1.0 for one in here])
     flow = [_by_background(one.slopes, 0.0) for one in here]
     by_u = scale[:, None] * _by_parameter(history, np.array(flow))
@@ -76,13 +76,7 @@ def stage_rates(history: FrozenHistory) -> StageRates:
     )
 
 
-def channel_derivatives(here: Linearized, gradient: FlowGradient) -> FloatArray:
-    """Derivative of a flow by ln of each kept level's rate to the ground state, shape (n_kept,)."""
-    derivatives: FloatArray = (gradient.loss * here.local.coupling.loss).sum(axis=1)
-    return derivatives
-
-
-def line_parameters(history: FrozenHistory, line: LineStrength) -> FloatArray:
+def line_parameters(history: FrozenHistory, line: NetTransitions) -> FloatArray:
     """Derivative of a line's strength by each parameter at fixed states, shape (6,)."""
     own = line.own_slope.tolist()
     slopes = [_by_background(s, o) for s, o in zip(line.slopes, own, strict=True)]
@@ -149,7 +143,7 @@ def node_results(
     temperatures, collected = [], []
     for number, series in enumerate(table.series):
         here = np.flatnonzero(piece_of == number)
-        to_nodes = series.node_weights(x[here])
+        to_nodes = series.interpolation_weights(x[here])
         value = to_nodes @ series.values_at_nodes
         derivative = _by_stored(history, here, value, gradients)
         held = beyond_doubles(pairs, float(np.exp(series.low)))

@@ -16,11 +16,12 @@ import numpy as np
 
 from ..arrays import FloatArray
 from ..atomic.levels import level_name
-from ..background.last_scattering import IONIZED_K
+from ..background.last_scattering import ionized_redshift
 from ..background.parameters import COSMOLOGICAL, helium_mass_fraction
-from ..errors import InputError, Outcome
+from ..errors import InputError
 from ..history.cost import check_memory
 from ..history.integrate import Progress
+from ..history.outcome import outcome_of, relaxation_hubble
 from ..history.setup import Setup
 from ..network.assembly import Workspace
 from ..network.reduction import exchange_pairs
@@ -31,8 +32,6 @@ from ..pieces import Pieces
 from .frozen import FrozenHistory, freeze
 from .scalars import Scalars, scalars_of
 from .sensitivity import (
-    NodeResults,
-    channel_derivatives,
     line_parameters,
     node_results,
     stage_rates,
@@ -100,13 +99,13 @@ def weigh(
     parsed = [parse_target(text) for text in targets]
     if not parsed:
         raise InputError("targets: name at least one, such as x_e(900)")
-    check_memory(setup)
+    check_memory(setup, more_bytes=len(parsed) * bytes_per_target(setup))
     with one_blas_thread():
-        _check_levels(setup, parsed)
+        _check_targets(setup, parsed)
         history = freeze(setup, *reach(setup, parsed), tell, pieces)
         scalars = scalars_of(history, parsed)
         for target, value in zip(parsed, scalars.value.tolist(), strict=True):
-            if not np.isfinite(value) or value == 0.0:
+            if not np.isfinite(value):
                 raise InputError(f"target {target.name}: the history does not reach it")
         return _assemble(setup, history, parsed, scalars, tell)
 
@@ -119,14 +118,27 @@ def reach(
     keeps = {level for t in targets if t.kind == "line" for level in (t.upper, t.lower)}
     integral = any(t.kind not in {"x_e", "T_m"} for t in targets)
     # Integrals start where hydrogen is ionized, and the history with them.
-    ionized = IONIZED_K / setup.cosmology.cmb_temperature_k - 1.0
+    ionized = ionized_redshift(setup.cosmology)
     return redshifts, tuple(sorted(keeps - {(1, 0)})), ionized if integral else 0.0
 
 
-def _check_levels(setup: Setup, targets: Sequence[Target]) -> None:
-    """Raise InputError for a line whose levels the atom has not, or whose photons stay."""
+def bytes_per_target(setup: Setup) -> float:
+    """Memory that the derivatives of one target take: one of each line, twice for a while."""
+    top, highest = setup.hydrogen.highest_resolved, setup.hydrogen.n_max
+    shells = highest - top
+    return 2.0 * 8.0 * (top**3 / 3.0 + shells * top**2 / 2.0 + shells**2)
+
+
+def _check_targets(setup: Setup, targets: Sequence[Target]) -> None:
+    """Raise InputError for what the atom has not, photons that stay, and integrals of nothing."""
     top, lyman = setup.hydrogen.highest_resolved, setup.atom_size.lyman_lines
+    end = setup.grid.redshift_end
     for target in targets:
+        if target.kind == "optical_depth" and target.redshift <= end:
+            raise InputError(
+                f"target {target.name}: the optical depth starts at grid.redshift_end = {end:g}; "
+                "give a redshift above it"
+            )
         if target.kind != "line":
             continue
         if target.upper[0] > top:
@@ -155,9 +167,10 @@ def _assemble(
     found = transitions(ladder)
     value = scalars.value
     parameter = direct.parameter * _parameter_values(history) / value[:, None]
+    slow = (relaxation_hubble(one.local) for one in stages(history))
     return Weighing(
         setup,
-        Outcome.CONVERGED,
+        outcome_of(setup, history.integrated, slow),
         tuple(t.name for t in targets),
         tuple(t.unit for t in targets),
         value,
@@ -185,12 +198,7 @@ def _direct(history: FrozenHistory, scalars: Scalars, weight: FloatArray) -> _Di
         np.einsum("spx,pxq->sq", weight, rates.parameter) + scalars.by_parameter,
     )
     for line in scalars.lines:
-        channels = np.array(
-            [
-                channel_derivatives(one, g)
-                for one, g in zip(stages(history), line.gradient, strict=True)
-            ]
-        )
+        channels = np.array([one.channel for one in line.gradient])
         own = line.weight @ channels
         made.two_photon[line.scalar] += own[0]
         made.escape[line.scalar] += own[history.equations.lines.upper]
@@ -210,27 +218,23 @@ def _by_rates(
         own[line.scalar] = line.weight
         sources.append(node_results(history, own, line.gradient))
     by_result = np.sum([source.by_result for source in sources], axis=0)
-    summed = NodeResults(sources[0].temperature_k, by_result)
     ladder = history.integrated.ladder
     total = NodeWeights(
         np.zeros((len(weight), n_places(ladder))),
         np.zeros((len(weight), len(ladder.levels))),
     )
     pairs, work = exchange_pairs(ladder), Workspace.of(ladder)
-    for count, (temperature_k, by_result) in enumerate(zip(*_plain(summed), strict=True)):
-        if np.any(by_result):
-            add_node_weights(ladder, pairs, temperature_k, by_result, total, work)
-        tell("weighing rates", (count + 1) / len(summed.temperature_k))
+    temperatures = sources[0].temperature_k.tolist()
+    for count, temperature_k in enumerate(temperatures):
+        if np.any(by_result[count]):
+            add_node_weights(ladder, pairs, temperature_k, by_result[count], total, work)
+        tell("weighing rates", (count + 1) / len(temperatures))
     for line in scalars.lines:
         if line.ends is not None:
             upper, lower = line.ends
             place = line_places(ladder, upper, ladder.kept_position[[lower]])
             total.bound_bound[line.scalar, place] += scalars.value[line.scalar]
     return total
-
-
-def _plain(results: NodeResults) -> tuple[list[float], FloatArray]:
-    return results.temperature_k.tolist(), results.by_result
 
 
 def _parameter_values(history: FrozenHistory) -> FloatArray:

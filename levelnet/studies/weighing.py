@@ -15,9 +15,6 @@ from ..history.setup import Setup
 if TYPE_CHECKING:
     from .budget import ErrorBudget
 
-PROCESSES = ("two_photon", "bound_bound", "bound_free", "escape", "compton")
-"""Processes that make up the network; the sum over one is the derivative by a common factor."""
-
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Weighing:

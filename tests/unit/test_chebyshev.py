@@ -113,6 +113,6 @@ def test_weights_of_the_node_values() -> None:
     np.testing.assert_array_equal(series.nodes, chebyshev_nodes(-1.0, 2.5, 9))
     places = np.array([-1.0, 0.3, 2.5])
     expected = [series.evaluate(x)[0] for x in places.tolist()]
-    weights = series.node_weights(places)
+    weights = series.interpolation_weights(places)
     np.testing.assert_allclose(weights @ values, expected, atol=1e-13)
     np.testing.assert_allclose(weights.sum(axis=1), 1.0, rtol=1e-13)

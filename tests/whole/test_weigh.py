@@ -1,4 +1,4 @@
-"""Weighing against differences of the same history, and against published sensitivities."""
+"""Weighing against differences of the same history and of whole runs, and what it refuses."""
 
 from __future__ import annotations
 
@@ -11,9 +11,13 @@ import numpy as np
 import pytest
 
 from levelnet.errors import InputError, SolveError
+from levelnet.history import cost
 from levelnet.history.run import solve
 from levelnet.network.weights import transitions
-from levelnet.studies.weigh import weigh
+from levelnet.studies import weigh_budget
+from levelnet.studies.budget import uncertainties_in
+from levelnet.studies.weigh import bytes_per_target, weigh
+from levelnet.studies.weigh_budget import weigh_with_budget
 from levelnet.studies.weighing import Weighing
 from tests.frozen_differences import (
     TARGETS,
@@ -177,7 +181,8 @@ def test_whole_shells_weigh_what_their_levels_weigh_together() -> None:
         ("line(9d-2p)", "resolved in l up to n = 4"),
         ("line(3p-1s)", "that line is closed"),
         ("x_e(10)", "below grid.redshift_end"),
-        ("optical_depth(5)", "does not reach it"),
+        ("optical_depth(5)", "starts at grid.redshift_end"),
+        ("optical_depth(20)", "starts at grid.redshift_end"),
         ("nonsense", "not known"),
     ],
 )
@@ -193,3 +198,27 @@ def test_what_cannot_be_weighed() -> None:
         weigh(small_setup(4, accuracy={"interpolate": False}), ["z_*"])
     with pytest.raises(SolveError):
         weigh(small_setup(4, accuracy={"max_steps": 10}), ["z_*"])
+
+
+def test_budget_in_parts_is_the_budget(monkeypatch: pytest.MonkeyPatch) -> None:
+    setup, targets = small_setup(5), ["z_*", "x_e(900)"]
+    band = ["x_e(900)", "x_e(700)", "x_e(500)", "x_e(300)"]
+    rows = uncertainties_in(setup.atom_size)
+    whole = weigh_with_budget(setup, targets, band, rows)
+    assert whole.targets == ("last_scattering_redshift", "x_e(900)")
+    memory = 2.5 * bytes_per_target(setup) / 0.3
+    monkeypatch.setattr(weigh_budget, "available_memory_bytes", lambda: memory)
+    parts = weigh_with_budget(setup, targets, band, rows)
+    assert whole.budget is not None and parts.budget is not None
+    assert parts.budget.targets == whole.budget.targets
+    assert len(whole.budget.targets) == 5
+    # Other step ends are asked for in each part, so the steps differ by their own error.
+    np.testing.assert_allclose(parts.budget.sigma, whole.budget.sigma, rtol=1e-5)
+
+
+def test_too_many_targets_for_the_memory(monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setattr(cost, "available_memory_bytes", lambda: 4e8)
+    weigh(small_setup(4), ["z_*"])
+    many = [f"x_e({z})" for z in range(200, 1700)]
+    with pytest.raises(InputError, match="of memory needed"):
+        weigh(small_setup(60), many)

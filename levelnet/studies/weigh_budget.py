@@ -1,0 +1,74 @@
+"""A weighing with its error budget, in as many parts as memory asks for."""
+
+from __future__ import annotations
+
+import dataclasses
+from collections.abc import Sequence
+
+import numpy as np
+
+from ..history.cost import available_memory_bytes
+from ..history.integrate import Progress
+from ..history.setup import Setup
+from ..pieces import Pieces
+from .budget import ErrorBudget, Uncertainty, error_budget
+from .weigh import bytes_per_target, weigh
+from .weighing import Weighing
+
+# Of the free memory, what the derivatives of one part may take.
+_SHARE = 0.3
+
+
+def weigh_with_budget(
+    setup: Setup,
+    targets: Sequence[str],
+    band: Sequence[str],
+    uncertainties: Sequence[Uncertainty],
+    *,
+    progress: Progress | None = None,
+    pieces: Pieces | None = None,
+) -> Weighing:
+    """Weigh targets, and budget their errors and those of further ones.
+
+    Parameters
+    ----------
+    setup, targets, progress, pieces
+        As for :func:`weigh`.
+    band : sequence of str
+        Further targets whose error alone is wanted, such as x_e at many redshifts; the derivatives
+        by every rate, 3 n_max^3 bytes each, are not kept.
+    uncertainties : sequence of Uncertainty
+        From :func:`levelnet.studies.budget.uncertainties_in`.
+
+    Returns
+    -------
+    Weighing
+        Of `targets`, with the budget of `targets` and `band`.
+    """
+    further = [name for name in band if name not in targets]
+    most = max(1, int(_SHARE * available_memory_bytes() / bytes_per_target(setup)))
+    first = max(0, most - len(targets))
+    parts = [[*targets, *further[:first]]]
+    parts += [further[k : k + most] for k in range(first, len(further), most)]
+    kept: Weighing | None = None
+    budgets: list[ErrorBudget] = []
+    for part in parts:
+        found = weigh(setup, part, progress=progress, pieces=pieces)
+        budgets.append(error_budget(found, uncertainties))
+        kept = found.first(len(targets)) if kept is None else kept
+    assert kept is not None
+    return dataclasses.replace(kept, budget=joined(budgets))
+
+
+def joined(budgets: Sequence[ErrorBudget]) -> ErrorBudget:
+    """One budget of all targets, from budgets of the same uncertainties."""
+    first = budgets[0]
+    return ErrorBudget(
+        tuple(name for one in budgets for name in one.targets),
+        tuple(unit for one in budgets for unit in one.units),
+        np.concatenate([one.value for one in budgets]),
+        np.concatenate([one.sigma for one in budgets]),
+        first.groups,
+        np.concatenate([one.contribution for one in budgets]),
+        first.sources,
+    )
