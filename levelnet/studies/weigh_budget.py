@@ -11,8 +11,8 @@ from ..history.cost import available_memory_bytes
 from ..history.integrate import Progress
 from ..history.setup import Setup
 from ..pieces import Pieces
+from . import weigh as engine
 from .budget import ErrorBudget, Uncertainty, error_budget
-from .weigh import bytes_per_target, weigh
 from .weighing import Weighing
 
 # Of the free memory, what the derivatives of one part may take.
@@ -33,7 +33,7 @@ def weigh_with_budget(
     Parameters
     ----------
     setup, targets, progress, pieces
-        As for :func:`weigh`.
+        As for :func:`levelnet.weigh`.
     band : sequence of str
         Further targets whose error alone is wanted, such as x_e at many redshifts; the derivatives
         by every rate, 3 n_max^3 bytes each, are not kept.
@@ -46,14 +46,14 @@ def weigh_with_budget(
         Of `targets`, with the budget of `targets` and `band`.
     """
     further = [name for name in band if name not in targets]
-    most = max(1, int(_SHARE * available_memory_bytes() / bytes_per_target(setup)))
+    most = max(1, int(_SHARE * available_memory_bytes() / engine.bytes_per_target(setup)))
     first = max(0, most - len(targets))
     parts = [[*targets, *further[:first]]]
     parts += [further[k : k + most] for k in range(first, len(further), most)]
     kept: Weighing | None = None
     budgets: list[ErrorBudget] = []
     for part in parts:
-        found = weigh(setup, part, progress=progress, pieces=pieces)
+        found = engine.weigh(setup, part, progress=progress, pieces=pieces)
         budgets.append(error_budget(found, uncertainties))
         kept = found.first(len(targets)) if kept is None else kept
     assert kept is not None
