@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import argparse
+import dataclasses
 import time
 from pathlib import Path
 from typing import TYPE_CHECKING
@@ -18,6 +19,7 @@ from .solve import cache_pieces
 if TYPE_CHECKING:
     from ..history.setup import Setup
     from ..studies.level_records import LevelStudy
+    from ..studies.level_requirement import Demands
     from ..studies.requirement import Requirement
     from ..studies.verdict import Verdict
 
@@ -92,7 +94,7 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
 def run(options: argparse.Namespace, console: Console) -> int:
     """Run the ladder, write it, print the verdict; 0 if every rung is ok, 1 if not."""
     from ..history.setup import load_setup
-    from ..studies.level_requirement import demands
+    from ..studies.level_records import Question
 
     setup = load_setup(options.setup)
     requirement = _requirement(options.requirement, setup)
@@ -104,8 +106,11 @@ def run(options: argparse.Namespace, console: Console) -> int:
     start = time.monotonic()
     study = _study(setup, ladder, resolve, requirement, options, console)
     seconds = time.monotonic() - start
-    found = judged(study, options.within, tuple(options.between))
-    met = None if requirement is None else demands(study, requirement)
+    asked = () if requirement is None else tuple(requirement.to_toml().splitlines())
+    low, high = options.between
+    question = Question(options.within, low, high, asked)
+    study = dataclasses.replace(study, question=question)
+    found, met = judged(study)
 
     from ..store import write
 
@@ -201,18 +206,22 @@ def _study(
         )
 
 
-def judged(
-    study: LevelStudy, within: float = WITHIN, between: tuple[float, float] | None = None
-) -> Verdict:
-    """Give the verdict; without a range, on as much of the usual one as the study covers."""
+def judged(study: LevelStudy) -> tuple[Verdict, Demands | None]:
+    """Answer what the study was asked; if nothing was, the usual on as much as it covers."""
+    from ..studies.level_requirement import demands
+    from ..studies.requirement import parse_requirement
     from ..studies.verdict import verdict
 
-    if between is None:
+    asked = study.question
+    if asked is None:
         low, high = float(study.redshift[-1]), float(study.redshift[0])
-        between = max(BETWEEN[0], low), min(BETWEEN[1], high)
-        if between[0] >= between[1]:
-            between = low, high
-    return verdict(study, within, *between)
+        inside = max(BETWEEN[0], low), min(BETWEEN[1], high)
+        return verdict(study, WITHIN, *(inside if inside[0] < inside[1] else (low, high))), None
+    found = verdict(study, asked.within, asked.low, asked.high)
+    if not asked.requirement:
+        return found, None
+    requirement = parse_requirement("\n".join(asked.requirement), "requirement", None)
+    return found, demands(study, requirement)
 
 
 def save_figures(

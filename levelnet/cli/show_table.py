@@ -27,11 +27,11 @@ def show_levels(
     if options.redshift is not None or options.csv is not None or options.export:
         raise InputError("--redshift, --csv, --export: not for a study of levels")
     written = save_figures(study, folder, options.force, console)
-    found = judged(study)
+    found, met = judged(study)
     if options.json:
-        print_json({**level_values(study, found), "file": options.file, "written": written})
+        print_json({**level_values(study, found, met), "file": options.file, "written": written})
         return 0
-    print(level_summary(study, found))
+    print(level_summary(study, found, met))
     print(f"{'file':<22}{options.file}")
     for path in written:
         print(f"{'written':<22}{path}")

@@ -128,6 +128,24 @@ HELD_OUT = Group(
     ),
 )
 RESOLVED = _rungs("resolved", "a ladder of resolve_l_to at the longest n_max")
+QUESTION = Group(
+    "question",
+    "what was asked of the study",
+    (
+        Variable("within", (), "1", "relative error of x_e that is allowed", "question.within"),
+        Variable("low", (), "1", "lowest redshift that counts", "question.low"),
+        Variable("high", (), "1", "highest redshift that counts", "question.high"),
+        _position("requirement_line", "position of the line, from 0"),
+        Variable(
+            "requirement",
+            ("requirement_line",),
+            "",
+            "requirement as TOML, its response within; no line where none was given",
+            "question.requirement",
+            "text",
+        ),
+    ),
+)
 
 LEVEL_LAYOUT = Layout(
     "levelnet study of levels",
@@ -135,7 +153,7 @@ LEVEL_LAYOUT = Layout(
     "a study of levels",
     layout.ROOT_ATTRIBUTES,
     (RUNGS, LIMIT, NOISE),
-    (HELD_OUT, RESOLVED),
+    (HELD_OUT, RESOLVED, QUESTION),
 )
 
 

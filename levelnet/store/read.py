@@ -222,13 +222,22 @@ def weighing_of(content: Content) -> Weighing:
 
 def level_study_of(content: Content) -> LevelStudy:
     """Make the study that :func:`levelnet.store.write.content_of` took apart."""
-    from ..studies.level_records import Estimate, Estimates, HeldOut, LevelStudy, Noise, Rungs
+    from ..studies.level_records import (
+        Estimate,
+        Estimates,
+        HeldOut,
+        LevelStudy,
+        Noise,
+        Question,
+        Rungs,
+    )
 
     def estimates(given: dict[str, Any]) -> Estimates:
         return Estimates(**{name: Estimate(**one) for name, one in given.items()})
 
     parts = _all_fields(content, LEVEL_LAYOUT)
     held, resolved = parts.pop("held_out", None), parts.pop("resolved", None)
+    question = parts.pop("question", None)
     return LevelStudy(
         setup=parse_setup(str(content.attributes["setup"]), "stored setup"),
         outcome=_outcome(content),
@@ -237,6 +246,7 @@ def level_study_of(content: Content) -> LevelStudy:
         noise=Noise(**parts.pop("noise")),
         held_out=None if held is None else HeldOut(held["n_max"], estimates(held["foreseen"])),
         resolved=None if resolved is None else Rungs(**resolved),
+        question=None if question is None else Question(**question),
         **parts,
     )
 

@@ -144,6 +144,26 @@ class Noise:
             frozen_array(self, name, getattr(self, name).shape)
 
 
+@dataclass(frozen=True, slots=True)
+class Question:
+    """What was asked of a study, so that a file answers as the run did.
+
+    Attributes
+    ----------
+    within : float, dimensionless
+        Relative error of x_e that is allowed.
+    low, high : float, dimensionless
+        Between which redshifts.
+    requirement : tuple of str
+        A requirement as lines of TOML, its response within; none where none was given.
+    """
+
+    within: float
+    low: float
+    high: float
+    requirement: tuple[str, ...] = ()
+
+
 @dataclass(frozen=True, slots=True, eq=False)
 class LevelStudy:
     """How many levels matter: a ladder of truncations and where it leads.
@@ -172,6 +192,8 @@ class LevelStudy:
         The check of the law on the longest rungs; None where the rungs are too few for it.
     resolved : Rungs or None
         Rungs of resolve_l_to at the longest n_max.
+    question : Question or None
+        What the study was asked, if it was.
     """
 
     setup: Setup
@@ -187,6 +209,7 @@ class LevelStudy:
     noise: Noise
     held_out: HeldOut | None = None
     resolved: Rungs | None = None
+    question: Question | None = None
 
     def __post_init__(self) -> None:
         """Check shapes and make every array read-only."""

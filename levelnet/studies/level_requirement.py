@@ -12,7 +12,7 @@ from ..errors import InputError
 from .convergence import first_to_pass, truncation_error
 from .level_records import LevelStudy
 from .levels import logarithm
-from .requirement import Requirement, Verdict, check
+from .requirement import Finding, Requirement, check
 from .targets import parse_target
 
 
@@ -27,16 +27,16 @@ class Demands:
         times the longest rung does.
     beyond : bool
         True where it is longer than any rung, and so extrapolated.
-    rungs : tuple of tuple of Verdict
+    rungs : tuple of tuple of Finding
         Every demand on every rung.
-    longer : tuple of Verdict
+    longer : tuple of Finding
         The same at `n_max`, or at ten times the longest rung where it is None.
     """
 
     n_max: int | None
     beyond: bool
-    rungs: tuple[tuple[Verdict, ...], ...]
-    longer: tuple[Verdict, ...]
+    rungs: tuple[tuple[Finding, ...], ...]
+    longer: tuple[Finding, ...]
 
 
 def check_covered(requirement: Requirement, redshift: FloatArray) -> None:
@@ -76,7 +76,7 @@ def demands(study: LevelStudy, requirement: Requirement) -> Demands:
         If the study does not cover what is asked.
     """
 
-    def at(n_max: int) -> tuple[Verdict, ...]:
+    def at(n_max: int) -> tuple[Finding, ...]:
         rungs, noise = study.rungs, study.noise
 
         def errors(name: str) -> FloatArray:
@@ -109,7 +109,7 @@ def demands_text(found: Demands, longest: int) -> str:
     return text
 
 
-def _share(one: Verdict) -> float:
+def _share(one: Finding) -> float:
     return math.inf if math.isnan(one.error) else one.error / one.limit
 
 

@@ -127,7 +127,7 @@ class Requirement:
 
 
 @dataclass(frozen=True, slots=True)
-class Verdict:
+class Finding:
     """One demand of a requirement, and whether it is met.
 
     Attributes
@@ -155,7 +155,7 @@ def check(
     delta_ln_x_e: FloatArray,
     delta_ln_t_m: FloatArray,
     observable_error: Mapping[str, float],
-) -> tuple[Verdict, ...]:
+) -> tuple[Finding, ...]:
     """Hold the errors of a history against a requirement.
 
     Parameters
@@ -172,7 +172,7 @@ def check(
 
     Returns
     -------
-    tuple of Verdict
+    tuple of Finding
         Observables, ranges, response, in the order of the requirement.
 
     Raises
@@ -184,20 +184,20 @@ def check(
     z = np.asarray(redshift, dtype=float)[order]
     deltas = {"x_e": delta_ln_x_e[order], "T_m": delta_ln_t_m[order]}
     found = [
-        _verdict(name, _observable_error(name, z, deltas, observable_error), limit, "relative")
+        _finding(name, _observable_error(name, z, deltas, observable_error), limit, "relative")
         for name, limit in requirement.observables.items()
     ]
     for one in requirement.ranges:
         error = _largest(one, z, deltas[one.quantity])
-        found.append(_verdict(one.name, error, one.relative, "relative"))
+        found.append(_finding(one.name, error, one.relative, "relative"))
     if requirement.response is not None:
         sigma = requirement.response.rows.sigma(z, deltas["x_e"])
-        found.append(_verdict("response", sigma, requirement.response.limit_sigma, "sigma"))
+        found.append(_finding("response", sigma, requirement.response.limit_sigma, "sigma"))
     return tuple(found)
 
 
-def _verdict(name: str, error: float, limit: float, unit: str) -> Verdict:
-    return Verdict(name, error, limit, unit, error <= limit)
+def _finding(name: str, error: float, limit: float, unit: str) -> Finding:
+    return Finding(name, error, limit, unit, error <= limit)
 
 
 def _observable_error(
@@ -230,9 +230,11 @@ def _between(name: str, z: FloatArray, delta: FloatArray, at: FloatArray) -> Flo
 
 
 def parse_requirement(
-    text: str, where: str = "requirement", folder: str | Path = "."
+    text: str, where: str = "requirement", folder: str | Path | None = "."
 ) -> Requirement:
     """Read a requirement from TOML text; a response file is looked for in `folder`.
+
+    Where `folder` is None the text must hold the response itself: no other file is opened.
 
     Raises
     ------
@@ -244,7 +246,7 @@ def parse_requirement(
     except (ValueError, RecursionError) as error:  # huge numbers raise plain ValueErrors
         raise InputError(f"{where}: not valid TOML: {error}") from None
     try:
-        if isinstance(values.get("response"), dict):
+        if folder is not None and isinstance(values.get("response"), dict):
             values["response"] = _with_rows(values["response"], Path(folder))
         return build(Requirement, values)
     except InputError as error:

@@ -13,8 +13,8 @@ import pytest
 
 from levelnet.errors import InputError
 from levelnet.studies.requirement import (
+    Finding,
     Requirement,
-    Verdict,
     check,
     load_requirement,
     parse_requirement,
@@ -104,8 +104,8 @@ def test_verdicts(folder: Path) -> None:
         "T_m(150 to 250)",
         "response",
     ]
-    assert found[0] == Verdict("last_scattering_redshift", 5e-5, 1e-4, "relative", True)
-    assert found[1] == Verdict("optical_depth(1100)", 3e-4, 2e-4, "relative", False)
+    assert found[0] == Finding("last_scattering_redshift", 5e-5, 1e-4, "relative", True)
+    assert found[1] == Finding("optical_depth(1100)", 3e-4, 2e-4, "relative", False)
     assert found[2].error == pytest.approx(2e-3 * math.exp(-16.0 / 9.0), rel=1e-4)  # the spline
     assert found[3].error == pytest.approx(5e-4, rel=1e-12)
     assert found[4].error == np.max(np.abs(x_e))

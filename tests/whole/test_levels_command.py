@@ -20,7 +20,8 @@ import pytest
 import levelnet
 from levelnet.cli.levels import judged
 from levelnet.cli.main import main
-from levelnet.studies.level_records import LevelStudy
+from levelnet.errors import InputError
+from levelnet.studies.level_records import LevelStudy, Question
 from tests.small_levels import small_study
 from tests.whole.test_command_line import GOOD, environment
 
@@ -59,6 +60,10 @@ def test_study_from_setup_to_verdict(folder: Path, capsys: pytest.CaptureFixture
     study = levelnet.read("good-levels.h5")
     assert isinstance(study, LevelStudy)
     assert study.rungs.n_max.tolist() == [4, 5, 6, 8, 10, 12]
+    assert main(["show", "good-levels.h5"]) == 0
+    shown = capsys.readouterr().out
+    verdicts = [line for line in said.splitlines() if line.startswith("verdict")]
+    assert len(verdicts) == 2 and all(line in shown for line in verdicts)
     assert sorted(path.name for path in (folder / "figures").iterdir()) == [
         "levels-check.pdf",
         "levels-check.svg",
@@ -79,7 +84,7 @@ def test_study_from_setup_to_verdict(folder: Path, capsys: pytest.CaptureFixture
     assert shown["limit"]["free_electron_fraction"]["value"] == (
         study.limit.free_electron_fraction.value.tolist()
     )
-    assert shown["verdict"]["within"] == 1e-3
+    assert shown["verdict"]["within"] == 0.2
     assert shown["held_out"]["n_max"] == [12]
     assert main(["show", "good-levels.h5", "--plot", "again"]) == 0
     assert (folder / "again" / "levels.svg").exists()
@@ -120,12 +125,33 @@ def test_complaints_are_one_line(
     assert time.monotonic() - start < 5.0
 
 
-def test_verdict_of_a_file_is_on_what_it_covers() -> None:
+def test_verdict_of_a_file_is_what_the_run_said() -> None:
     study = small_study()
-    assert (judged(study).low, judged(study).high) == (200.0, 1600.0)
-    assert judged(study, between=(900.0, 1000.0)).low == 900.0
+
+    def ends(one: LevelStudy) -> tuple[float, float]:
+        found, met = judged(one)
+        assert met is None
+        return found.low, found.high
+
+    assert ends(study) == (200.0, 1600.0)
+    asked = dataclasses.replace(study, question=Question(1e-2, 900.0, 1000.0))
+    assert ends(asked) == (900.0, 1000.0)
+    assert judged(asked)[0].within == 1e-2
     early = dataclasses.replace(study, redshift=np.linspace(3000.0, 2600.0, len(study.redshift)))
-    assert (judged(early).low, judged(early).high) == (2600.0, 3000.0)
+    assert ends(early) == (2600.0, 3000.0)
+
+
+def test_requirement_of_a_file_opens_no_other_file(tmp_path: Path) -> None:
+    rows = ("[response]", 'file = "/etc/hostname"', "limit_sigma = 0.1")
+    study = dataclasses.replace(small_study(), question=Question(1e-3, 200.0, 1600.0, rows))
+    with pytest.raises(InputError, match="response"):
+        judged(study)
+    rows = ("[observables]", '"x_e(900)" = 1e-3')
+    study = dataclasses.replace(small_study(), question=Question(1e-3, 200.0, 1600.0, rows))
+    levelnet.write(study, tmp_path / "study.h5")
+    again = levelnet.read(tmp_path / "study.h5")
+    assert again.question == study.question
+    assert judged(again) == judged(study)
 
 
 def test_interrupt_leaves_no_file(folder: Path) -> None:
