@@ -9,6 +9,7 @@ from dataclasses import dataclass
 from pathlib import Path
 
 from ..errors import InputError
+from ..texts import read_text
 from .selection import Selector, parse_selector
 
 SELECTOR_COLUMNS = ("process", "upper", "lower")
@@ -48,18 +49,7 @@ def read_rows(path: str | Path, columns: Sequence[str]) -> tuple[str, ...]:
     InputError
         If the file cannot be read, is too large, is no text, or has another header or no rows.
     """
-    try:
-        with open(path, "rb") as file:
-            content = file.read(_MOST_BYTES + 1)
-    except (OSError, ValueError) as error:  # ValueError: a null character in the path
-        reason = (error.strerror if isinstance(error, OSError) else None) or str(error)
-        raise InputError(f"{path}: cannot be read: {reason}") from None
-    if len(content) > _MOST_BYTES:
-        raise InputError(f"{path}: over {_MOST_BYTES // 1_000_000} MB; no table of rates is")
-    try:
-        text = content.decode("utf-8-sig")
-    except UnicodeDecodeError:
-        raise InputError(f"{path}: not UTF-8 text") from None
+    text = read_text(path, _MOST_BYTES, "utf-8-sig")
     lines = [line.strip() for line in io.StringIO(text, newline=None)]
     lines = [line for line in lines if line and not line.startswith("#")]
     if not lines:

@@ -20,6 +20,7 @@ import numpy as np
 
 from ..arrays import FloatArray, frozen_array
 from ..errors import FileFormatError, InputError, RangeError
+from ..texts import read_bytes
 from .neutrinos import Number
 from .patches import Patches, patches
 
@@ -172,14 +173,7 @@ def read_expansion_table(path: str | Path, sha256: str | None = None) -> Expansi
         If the file cannot be read, is another file than asked, or its rows are not an expansion
         history. The text names the file and the line or row.
     """
-    try:
-        with open(path, "rb") as file:
-            content = file.read(_MAX_BYTES + 1)
-    except (OSError, ValueError) as error:  # ValueError: a null character in the path
-        reason = (error.strerror if isinstance(error, OSError) else None) or str(error)
-        raise InputError(f"{path}: cannot be read: {reason}") from None
-    if len(content) > _MAX_BYTES:
-        raise FileFormatError(f"{path}: over {_MAX_BYTES // 1_000_000} MB, no expansion table")
+    content = read_bytes(path, _MAX_BYTES)
     actual = hashlib.sha256(content).hexdigest()
     if sha256 is not None and sha256.lower() != actual:
         raise InputError(f"{path}: SHA-256 is {actual}, but {sha256} was asked for")

@@ -168,7 +168,7 @@ def _weighed(
     from ..studies.weigh_budget import weigh_with_budget
 
     if not options.no_budget:
-        uncertainties = uncertainties_in(setup.atom_size, options.uncertainties)
+        uncertainties = uncertainties_in(setup, options.uncertainties)
     announce_cost(setup, console, _HISTORIES)
     pieces = None if options.no_cache else cache_pieces(console)
     with console.progress() as progress:

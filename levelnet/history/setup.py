@@ -19,6 +19,9 @@ from ..background.cosmology import Cosmology
 from ..errors import InputError
 from ..escape.lines import Lines
 from ..records import build, checked_record, from_mapping
+from ..texts import read_text
+
+_MOST_BYTES = 64_000_000  # an expansion table may stand inside
 
 
 @checked_record
@@ -134,6 +137,21 @@ class Setup:
                 f"lines: with hydrogen.resolve_l_to = {top} give a number from 1 to {top - 1}"
             )
         self.rates.check(self.atom_size)
+        self._check_overrides_act()
+
+    def _check_overrides_act(self) -> None:
+        """Refuse factors on rates that this setup switches off."""
+        for one in self.rates.table:
+            process = one.selector.process
+            if process == "escape" and self.lines.hydrogen == "closed":
+                raise ValueError(
+                    f'{one.where}: {one.text} changes nothing: lines.hydrogen = "closed"'
+                )
+            off = self.hydrogen.two_photon_rate_per_s == 0.0 and one.value_per_s is None
+            if process == "two_photon" and off:
+                raise ValueError(
+                    f"{one.where}: {one.text} changes nothing: hydrogen.two_photon_rate_per_s = 0"
+                )
 
     @property
     def atom_size(self) -> AtomSize:
@@ -206,9 +224,4 @@ def load_setup(path: str | Path) -> Setup:
         If the file cannot be read or any key is unknown, missing, of the wrong type or out of
         range; the text lists every complaint with its path.
     """
-    try:
-        text = Path(path).read_text(encoding="utf-8")
-    except (OSError, UnicodeDecodeError) as error:
-        reason = error.strerror if isinstance(error, OSError) else "not UTF-8 text"
-        raise InputError(f"{path}: cannot be read: {reason}") from None
-    return parse_setup(text, str(path))
+    return parse_setup(read_text(path, _MOST_BYTES), str(path))

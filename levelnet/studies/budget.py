@@ -19,7 +19,7 @@ import numpy as np
 import atomic_tables
 
 from ..arrays import FloatArray, frozen_array
-from ..atomic.selection import AtomSize, Selector, level_mask, line_mask, pair_mask
+from ..atomic.selection import Selector, level_mask, line_mask, pair_mask
 from ..atomic.selector_rows import (
     SELECTOR_COLUMNS,
     SelectorRow,
@@ -28,7 +28,9 @@ from ..atomic.selector_rows import (
     read_rows,
 )
 from ..errors import InputError
+from ..history.setup import Setup
 from ..tables import read_table
+from .targets import parse_target
 from .weighing import Weighing
 
 COLUMNS = (*SELECTOR_COLUMNS, "sigma", "group", "source")
@@ -118,9 +120,10 @@ class ErrorBudget:
 
     def ranked(self, target: str) -> tuple[Contribution, ...]:
         """Contributions to the error of one target, the largest first."""
-        if target not in self.targets:
+        name = target if target in self.targets else parse_target(target).name
+        if name not in self.targets:
             raise InputError(f'target "{target}": in the budget are {", ".join(self.targets)}')
-        row = self.contribution[self.targets.index(target)]
+        row = self.contribution[self.targets.index(name)]
         order = np.argsort(-np.abs(row), kind="stable").tolist()
         return tuple(Contribution(self.groups[k], float(row[k]), self.sources[k]) for k in order)
 
@@ -139,8 +142,9 @@ def load_uncertainties(path: str | Path | None = None) -> tuple[Uncertainty, ...
     Parameters
     ----------
     path : str or Path, optional
-        A CSV file with the columns ``process,upper,lower,sigma,group,source``; None: the table of
-        published uncertainties, ``hydrogen/rate_uncertainties`` of `atomic_tables`.
+        A CSV file with the columns ``process,upper,lower,sigma,group,source``; None: the project's
+        table of published uncertainties and of estimates, ``hydrogen/rate_uncertainties`` of
+        `atomic_tables`.
 
     Returns
     -------
@@ -174,19 +178,22 @@ def _uncertainty(row: SelectorRow) -> Uncertainty:
     return Uncertainty(row.where, row.number, row.selector, sigma, group, source)
 
 
-def uncertainties_in(atom: AtomSize, path: str | Path | None = None) -> tuple[Uncertainty, ...]:
-    """Load the uncertainties of an atom before it is weighed.
+def uncertainties_in(setup: Setup, path: str | Path | None = None) -> tuple[Uncertainty, ...]:
+    """Load the uncertainties of a setup before it is weighed.
 
     Parameters
     ----------
-    atom : AtomSize
-        As ``setup.atom_size``.
+    setup : Setup
+        What will be weighed.
     path : str or Path, optional
         A file of one's own: InputError where a row selects nothing in the atom. None: the rows of
-        the default table that do.
+        the default table that apply; those of the escape say what Sobolev's treatment leaves out,
+        and are left out themselves with any other.
     """
-    rows = load_uncertainties(path)
+    rows, atom = load_uncertainties(path), setup.atom_size
     found = tuple(one for one in rows if one.selector.exists_in(atom))
+    if path is None and setup.lines.hydrogen != "sobolev":
+        found = tuple(one for one in found if one.selector.process != "escape")
     for one in rows:
         if path is not None and one not in found:
             raise InputError(

@@ -15,8 +15,11 @@ from pydantic import BeforeValidator, Field
 from ..arrays import FloatArray
 from ..errors import InputError
 from ..records import build, checked_record, from_mapping
+from ..texts import read_text
 from .response import Response, read_response
 from .targets import parse_target
+
+_MOST_BYTES = 64_000_000  # a response may stand inside
 
 Error = Annotated[float, Field(gt=0.0, le=1.0)]
 Redshift = Annotated[float, Field(ge=0.0, le=10_000.0)]
@@ -285,9 +288,5 @@ def load_requirement(path: str | Path) -> Requirement:
     InputError
         If a file cannot be read or any key is unknown, missing, of the wrong type or out of range.
     """
-    try:
-        text = Path(path).read_text(encoding="utf-8")
-    except (OSError, ValueError) as error:
-        reason = error.strerror if isinstance(error, OSError) else "not UTF-8 text"
-        raise InputError(f"{path}: cannot be read: {reason}") from None
+    text = read_text(path, _MOST_BYTES)
     return parse_requirement(text, str(path), Path(path).parent)

@@ -27,6 +27,7 @@ from pydantic import BeforeValidator, Field
 from ..arrays import FloatArray
 from ..errors import InputError
 from ..records import checked_record
+from ..texts import read_bytes
 
 FIRST_LINE = "# levelnet response"
 MAX_OBSERVABLES, MAX_ROWS = 100, 5000
@@ -186,14 +187,7 @@ def read_response(path: str | Path, sha256: str | None = None) -> Response:
         If the file cannot be read, is another one than asked, or breaks a rule; the text names the
         line or row.
     """
-    try:
-        with open(path, "rb") as stream:
-            content = stream.read(_MAX_BYTES + 1)
-    except (OSError, ValueError) as error:  # ValueError: a null character in the path
-        reason = (error.strerror if isinstance(error, OSError) else None) or str(error)
-        raise InputError(f"{path}: cannot be read: {reason}") from None
-    if len(content) > _MAX_BYTES:
-        raise InputError(f"{path}: over {_MAX_BYTES // 1_000_000} MB, no response")
+    content = read_bytes(path, _MAX_BYTES)
     actual = hashlib.sha256(content).hexdigest()
     if sha256 is not None and sha256.lower() != actual:
         raise InputError(f"{path}: SHA-256 is {actual}, but {sha256} was asked for")

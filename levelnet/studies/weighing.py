@@ -11,6 +11,7 @@ from ..arrays import FloatArray, IntArray, frozen_array
 from ..atomic.levels import LevelSet
 from ..errors import InputError, Outcome
 from ..history.setup import Setup
+from .targets import parse_target
 
 if TYPE_CHECKING:
     from .budget import ErrorBudget
@@ -89,9 +90,10 @@ class Weighing:
 
     def index(self, target: str) -> int:
         """Position of `target` along the first axis."""
-        if target not in self.targets:
+        name = target if target in self.targets else parse_target(target).name
+        if name not in self.targets:
             raise InputError(f'target "{target}": weighed were {", ".join(self.targets)}')
-        return self.targets.index(target)
+        return self.targets.index(name)
 
     def first(self, count: int) -> Weighing:
         """The same for the first `count` targets alone."""

@@ -10,7 +10,6 @@ import pytest
 
 import atomic_tables
 from levelnet.atomic.levels import hydrogenic_levels
-from levelnet.atomic.selection import AtomSize
 from levelnet.errors import InputError, Outcome, TableError
 from levelnet.studies import budget as room
 from levelnet.studies.budget import (
@@ -242,9 +241,11 @@ def test_no_rows_are_refused() -> None:
 
 
 def test_rows_that_an_atom_has_not(tmp_path: Path) -> None:
-    small = AtomSize(2, 2, 1)
+    small = small_setup(2)
     kept = {one.selector.process for one in uncertainties_in(small)}
     assert "bound_bound" not in kept and {"bound_free", "two_photon", "escape"} <= kept
+    closed = uncertainties_in(small_setup(2, lines={"hydrogen": "closed"}))
+    assert "escape" not in {one.selector.process for one in closed}
     path = tmp_path / "mine.csv"
     path.write_text("process,upper,lower,sigma,group,source\nbound_bound,3d,2p,0.1,,test\n")
     with pytest.raises(InputError, match=r"row 1: selector .* matches nothing in hydrogen"):

@@ -203,7 +203,7 @@ def test_what_cannot_be_weighed() -> None:
 def test_budget_in_parts_is_the_budget(monkeypatch: pytest.MonkeyPatch) -> None:
     setup, targets = small_setup(5), ["z_*", "x_e(900)"]
     band = ["x_e(900)", "x_e(700)", "x_e(500)", "x_e(300)"]
-    rows = uncertainties_in(setup.atom_size)
+    rows = uncertainties_in(setup)
     whole = weigh_with_budget(setup, targets, band, rows)
     assert whole.targets == ("last_scattering_redshift", "x_e(900)")
     memory = 2.5 * bytes_per_target(setup) / 0.3

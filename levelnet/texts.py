@@ -1,0 +1,52 @@
+"""Text files that a user hands in: read whole, within a size, refused in one line."""
+
+from __future__ import annotations
+
+import os
+import stat
+from pathlib import Path
+
+from .errors import InputError
+
+_MEGABYTE = 1_000_000
+
+
+def read_bytes(path: str | Path, most_bytes: int) -> bytes:
+    """Read a plain file.
+
+    Parameters
+    ----------
+    path : str or Path
+        The file.
+    most_bytes : int
+        Largest size allowed, in whole megabytes.
+
+    Raises
+    ------
+    InputError
+        If it cannot be read, is no plain file (reading a pipe would wait for ever), or is larger.
+    """
+    try:
+        # Devices and pipes are known before they are opened: opening may already wait.
+        mode = os.stat(path).st_mode
+        if not stat.S_ISREG(mode) and not stat.S_ISDIR(mode):
+            raise InputError(f"{path}: cannot be read: not a plain file")
+        with open(path, "rb") as file:
+            content = file.read(most_bytes + 1)
+    except (OSError, ValueError) as error:  # ValueError: a null character in the path
+        if isinstance(error, InputError):
+            raise
+        reason = (error.strerror if isinstance(error, OSError) else None) or str(error)
+        raise InputError(f"{path}: cannot be read: {reason}") from None
+    if len(content) > most_bytes:
+        raise InputError(f"{path}: over {most_bytes // _MEGABYTE} MB")
+    return content
+
+
+def read_text(path: str | Path, most_bytes: int, encoding: str = "utf-8") -> str:
+    """Read a plain text file; as :func:`read_bytes`, and InputError if it is no text."""
+    try:
+        return read_bytes(path, most_bytes).decode(encoding)
+    except UnicodeDecodeError:
+        name = "plain ASCII" if encoding == "ascii" else "UTF-8"
+        raise InputError(f"{path}: not {name} text") from None
