@@ -70,6 +70,7 @@ BUDGET = Group(
         Variable("value", ("target",), "1", "value of the target in its unit", "budget.value"),
         _text("group", "group", "rates that err together", "budget.groups"),
         _text("source", "group", "where their uncertainty comes from", "budget.sources"),
+        _text("row", "row", "what was assumed: selector, sigma, group", "budget.rows"),
         Variable(
             "contribution",
             ("target", "group"),

@@ -66,6 +66,12 @@ class Uncertainty:
     group: str
     source: str
 
+    @property
+    def row(self) -> str:
+        """What was assumed: "escape 2p: sigma 0.08, group two-photon and Raman above 2s"."""
+        group = f", group {self.group}" if self.group else ""
+        return f"{self.selector.text}: sigma {self.sigma!r}{group}"
+
 
 class Contribution(NamedTuple):
     """What one group adds to the error of a target: its relative error at +1 sigma, with sign."""
@@ -101,6 +107,8 @@ class ErrorBudget:
         Relative change of each target where the rates of one group are higher by 1 sigma.
     sources : tuple of str, length n_groups
         Where the uncertainties come from.
+    rows : tuple of str
+        What was assumed, row by row: selector, sigma, group.
     """
 
     targets: tuple[str, ...]
@@ -110,6 +118,7 @@ class ErrorBudget:
     groups: tuple[str, ...]
     contribution: FloatArray
     sources: tuple[str, ...]
+    rows: tuple[str, ...] = ()
 
     def __post_init__(self) -> None:
         """Check shapes and make every array read-only."""
@@ -249,6 +258,7 @@ def error_budget(weighing: Weighing, uncertainties: Sequence[Uncertainty]) -> Er
         groups,
         contribution,
         tuple("; ".join(texts) for texts in sources),
+        tuple(one.row for one in uncertainties),
     )
 
 

@@ -71,4 +71,5 @@ def joined(budgets: Sequence[ErrorBudget]) -> ErrorBudget:
         first.groups,
         np.concatenate([one.contribution for one in budgets]),
         first.sources,
+        first.rows,
     )
