@@ -7,55 +7,33 @@ With the harder photon of energy E and E_1s = 0, both are the same matrix elemen
 over every p state, the continuum included: below Delta the softer photon, Delta - E, is emitted
 too, above it E - Delta is absorbed. The sum is a finite one over the eigenstates of the Hamiltonian
 in a Sturmian basis. M has poles where E is the energy of a Lyman line, for there the second order
-contains the first twice over: nl -> n'p -> 1s. At n' = n the pole is cancelled by the phase space.
+is two steps of the first: nl -> n'p -> 1s. At n' = n phase space cancels the pole.
 """
 
 from __future__ import annotations
 
-import functools
 from math import pi
 from typing import NamedTuple
 
 import numpy as np
 from numpy.typing import ArrayLike
-from scipy.linalg import eigh
-from scipy.special import eval_genlaguerre, gammaln, roots_laguerre
 
 from .. import constants as const
 from ..arrays import FloatArray
 from ..errors import InputError, RangeError
 from .bound_bound import einstein_a, quantum_numbers
 from .levels import ionization_scale_ev
+from .sturmian import SturmianBasis, gap_hartree, scaled_amplitude, virtual_states
 
 N_MAX = 10
 """Highest n of the initial level for which the accuracy is tested."""
 HIGHEST_INTERMEDIATE = 50
 """Highest n' of the resonances that the basis holds; photons beyond them are refused."""
 
-_ENERGY_1S = -0.5  # hartree
-# An eigenvalue as near as this to a bound level is that level: rounding leaves 5e-13, relative.
-_CONVERGED = 1e-11
 # Squared ratio of the photon sums over polarization and direction, nl -> 1s, to those of ns -> 1s.
 _ANGULAR = {0: 1.0, 2: 0.4}
-
-
-class SturmianBasis(NamedTuple):
-    """A basis for the p states: see :func:`_p_hamiltonian`."""
-
-    exponent: float  # lambda, in inverse Bohr radii
-    size: int
-
-
 # Bound states up to 60p come out to 1e-12 (energy) and 1e-11 (dipole integrals).
 _BASIS = SturmianBasis(0.12, 300)
-
-
-class VirtualStates(NamedTuple):
-    """What the matrix element nl -> 1s needs of its intermediate p states."""
-
-    degenerate: float  # R(1s,np) R(np,nl), in a.u.
-    weight: FloatArray  # (2 h - 1) R(1s,p) R(p,nl) of the others, in a.u.
-    pole: FloatArray  # h = (E_p - E_1s)/Delta of the others
 
 
 class Resonances(NamedTuple):
@@ -102,8 +80,9 @@ def two_photon_spectrum_per_s_hz(
     Notes
     -----
     dW/dnu = (16/27) alpha^6 C_l w^3 (Delta - w)^3 M^2 with w in hartree, C_s = 1 and C_d = 2/5.
-    Non-relativistic, reduced mass in the energies (in dW/dnu it cancels); relative error below
-    1e-10 off the poles (and off the zeros of M), as a non-relativistic number.
+    Non-relativistic, reduced mass in the energies (in dW/dnu it cancels). M errs by less than 5e-11
+    of the sum of magnitudes of its terms, so dW/dnu by 2e-11 in most places and by more next to the
+    zeros of M. Relativity counts at order alpha^2 = 5e-5.
 
     The rate is the undamped one. At n' < n it has double poles, the one-photon cascades
     nl -> n'p -> 1s: infinite there (or as large as rounding leaves it), and no rate within some
@@ -119,12 +98,12 @@ def two_photon_spectrum_per_s_hz(
     Examples
     --------
     >>> print(f"{two_photon_spectrum_per_s_hz(3, 0, 6.0):.4e}")
-    1.7796e-15
+    1.7775e-15
     """
-    _check_level(n, l)
-    if not 2 <= lowest_intermediate <= n:
+    n, l = _checked_level(n, l)
+    if lowest_intermediate not in range(2, n + 1):
         raise InputError(f"lowest_intermediate = {lowest_intermediate}: allowed are 2 to n = {n}")
-    energy_ev = _checked_energy(photon_energy_ev, 0.0, level_energy_ev(n))
+    energy_ev = _checked_energy(photon_energy_ev, 0.0, _delta_ev(n))
     return _spectrum(l, n, energy_ev, lowest_intermediate)
 
 
@@ -136,8 +115,9 @@ def raman_spectrum_per_s_hz(n: int, l: int, photon_energy_ev: ArrayLike) -> Floa
     n, l : int, dimensionless
         Initial level: ns with 2 <= n <= 10, or nd with 3 <= n <= 10.
     photon_energy_ev : array_like, any shape, eV
-        Energy of the harder photon, that goes out: from the energy Delta of the level above 1s (0
-        there) to that of the Lyman line 50p-1s, 13.5928 eV. The other has photon_energy_ev - Delta.
+        Energy of the harder photon, that goes out: from the energy Delta of the level above 1s
+        (where the rate is 0) to that of the Lyman line 50p-1s, 13.5928 eV. The other photon has
+        photon_energy_ev - Delta.
 
     Returns
     -------
@@ -152,9 +132,9 @@ def raman_spectrum_per_s_hz(n: int, l: int, photon_energy_ev: ArrayLike) -> Floa
 
     Notes
     -----
-    The formula of :func:`two_photon_spectrum_per_s_hz` with Delta - w = -(energy absorbed), which
-    it continues analytically: dW/dnu changes its sign there by the photon's phase space alone.
-    Relative error and poles as there; the poles stand at n' > n.
+    The formula of :func:`two_photon_spectrum_per_s_hz` with |Delta - w|: M continues analytically
+    from emission of the softer photon to its absorption. Accuracy and poles as there; the poles
+    stand at n' > n, absorption nl -> n'p followed by the Lyman line n'p-1s.
 
     References
     ----------
@@ -163,11 +143,11 @@ def raman_spectrum_per_s_hz(n: int, l: int, photon_energy_ev: ArrayLike) -> Floa
     Examples
     --------
     >>> print(f"{raman_spectrum_per_s_hz(2, 0, 11.0):.4e}")
-    1.5402e-14
+    1.1590e-14
     """
-    _check_level(n, l)
-    limit = level_energy_ev(HIGHEST_INTERMEDIATE)
-    energy_ev = _checked_energy(photon_energy_ev, level_energy_ev(n), limit)
+    n, l = _checked_level(n, l)
+    limit_ev = _delta_ev(HIGHEST_INTERMEDIATE)
+    energy_ev = _checked_energy(photon_energy_ev, _delta_ev(n), limit_ev)
     return _spectrum(l, n, energy_ev)
 
 
@@ -185,8 +165,9 @@ def second_order_matrix_element(n: int, l: int, photon_energy_ev: ArrayLike) -> 
     Returns
     -------
     ndarray, shape of `photon_energy_ev`, in units of a_0^2/hartree
-        Both scaled to the reduced mass. Radial functions are positive next to the nucleus. A sign
-        that changes between poles means a spectrum with a zero there; at 0 and Delta it is infinite.
+        Both units are those of the reduced mass. Radial functions are positive next to the nucleus.
+        Where M changes its sign between two poles the spectrum has a zero; M is infinite at 0 and
+        at Delta, the spectrum is not.
 
     Raises
     ------
@@ -202,13 +183,12 @@ def second_order_matrix_element(n: int, l: int, photon_energy_ev: ArrayLike) -> 
     >>> print(f"{second_order_matrix_element(2, 0, 5.099359):.3f}")
     -47.122
     """
-    _check_level(n, l)
-    limit = level_energy_ev(HIGHEST_INTERMEDIATE)
-    energy_ev = _checked_energy(photon_energy_ev, 0.0, limit)
-    fraction = energy_ev / level_energy_ev(n)
+    n, l = _checked_level(n, l)
+    energy_ev = _checked_energy(photon_energy_ev, 0.0, _delta_ev(HIGHEST_INTERMEDIATE))
+    fraction = energy_ev / _delta_ev(n)
     amplitude = scaled_amplitude(virtual_states(n, l, _BASIS), fraction)
     with np.errstate(divide="ignore"):
-        element: FloatArray = amplitude / (fraction * (1.0 - fraction) * _gap(n))
+        element: FloatArray = amplitude / (fraction * (1.0 - fraction) * gap_hartree(n))
     return element
 
 
@@ -248,9 +228,9 @@ def lyman_resonances(n: int, l: int, n_intermediate: ArrayLike) -> Resonances:
     --------
     >>> poles = lyman_resonances(3, 0, 2)
     >>> print(f"{poles.photon_energy_ev:.4f} eV, {poles.strength_per_s2:.4e} s^-2")
-    10.1987 eV, 1.0018e+14 s^-2
+    10.1987 eV, 1.0019e+14 s^-2
     """
-    _check_level(n, l)
+    n, l = _checked_level(n, l)
     middle, _ = quantum_numbers("intermediate level", n_intermediate, 1)
     if np.any(middle == n):
         raise InputError(f"n_intermediate = {n}: no pole where it equals n of the level itself")
@@ -268,106 +248,36 @@ def level_energy_ev(n: ArrayLike) -> FloatArray:
     return ionization_scale_ev() - binding
 
 
-def scaled_amplitude(states: VirtualStates, fraction: FloatArray) -> FloatArray:
-    """Return y (1 - y) Delta M in a.u., at y = `fraction`, the energy of one photon over Delta.
-
-    The bracket of M is (2 h - 1)/((h - y) (h - 1 + y))/Delta for the state at h. The degenerate
-    state, at h = 1, gives 1/(y (1 - y))/Delta exactly, so the product has no pole at y = 0 or 1.
-    Poles elsewhere give an infinity.
-    """
-    rest = 1.0 - fraction
-    total = np.zeros_like(fraction)
-    with np.errstate(divide="ignore"):
-        for weight, pole in zip(states.weight, states.pole, strict=True):
-            total += weight / ((pole - fraction) * (pole - rest))
-    amplitude: FloatArray = states.degenerate + fraction * rest * total
-    return amplitude
-
-
-@functools.cache
-def virtual_states(
-    n: int, l: int, basis: SturmianBasis, lowest_intermediate: int = 2
-) -> VirtualStates:
-    """Form the dipole products 1s - p - nl of the p states in a basis, from that n' upwards."""
-    energy, vectors = p_states(basis)
-    product = (dipole_integrals(1, 0, basis) @ vectors) * (dipole_integrals(n, l, basis) @ vectors)
-    pole = (energy - _ENERGY_1S) / _gap(n)
-    others = np.arange(len(pole)) >= lowest_intermediate - 2
-    others[n - 2] = False
-    weight = product * (2.0 * pole - 1.0)
-    return VirtualStates(float(product[n - 2]), weight[others], pole[others])
-
-
-@functools.cache
-def p_states(basis: SturmianBasis) -> tuple[FloatArray, FloatArray]:
-    """Energies, ascending, and vectors of the p states in a basis; n'p is number n' - 2."""
-    energy, vectors = eigh(*_p_hamiltonian(basis))
-    bound = -0.5 / (np.arange(basis.size) + 2.0) ** 2
-    # Exact, so that resonances stand where they belong, and np is degenerate with nl.
-    converged = np.isclose(energy, bound, rtol=_CONVERGED, atol=0.0)
-    return np.where(converged, bound, energy), vectors
-
-
-def _p_hamiltonian(basis: SturmianBasis) -> tuple[FloatArray, FloatArray]:
-    """Hamiltonian and overlap of the p Sturmian functions, in a.u.
-
-    The functions N_k x^2 exp(-x/2) L_k^(3)(x), x = lambda r, are normalised to <k|1/r|k> = 1. They
-    obey H|k> = [-lambda^2/8 + ((k + 2) lambda/2 - 1)/r] |k>, so that both matrices are tridiagonal
-    and known in closed form (Rotenberg 1970, Adv. At. Mol. Phys. 6, 233; from memory).
-    """
-    k = np.arange(basis.size, dtype=np.float64)
-    beside = -np.sqrt((k[:-1] + 1.0) * (k[:-1] + 4.0))
-    overlap = np.diag(2.0 * (k + 2.0)) + np.diag(beside, 1) + np.diag(beside, -1)
-    overlap /= basis.exponent
-    potential = np.diag(0.5 * basis.exponent * (k + 2.0) - 1.0)
-    return potential - basis.exponent**2 / 8.0 * overlap, overlap
-
-
-def dipole_integrals(n: int, l: int, basis: SturmianBasis) -> FloatArray:
-    """Integrals <nl|r|k> over the p Sturmian functions, shape (size,), in a.u.
-
-    Gauss-Laguerre in t = (1/n + lambda/2) r is exact: the rest is a polynomial.
-    """
-    nodes, weights = roots_laguerre((basis.size + n) // 2 + 2)
-    decay = 1.0 / n + 0.5 * basis.exponent
-    r = nodes / decay
-    x = basis.exponent * r
-    k = np.arange(basis.size)[:, None]
-    norm = np.exp(0.5 * (gammaln(k + 1.0) - gammaln(k + 4.0)))
-    functions = norm * x**2 * eval_genlaguerre(k, 3, x)
-    scale = 2.0 / n**2 * np.exp(0.5 * (gammaln(n - l) - gammaln(n + l + 1.0)))
-    radial = scale * r * (2.0 * r / n) ** l * eval_genlaguerre(n - l - 1, 2 * l + 1, 2.0 * r / n)
-    integrals: FloatArray = functions @ (weights * r * radial) / decay
-    return integrals
-
-
 def _spectrum(l: int, n: int, energy_ev: FloatArray, lowest_intermediate: int = 2) -> FloatArray:
-    fraction = energy_ev / level_energy_ev(n)
+    fraction = energy_ev / _delta_ev(n)
     amplitude = scaled_amplitude(virtual_states(n, l, _BASIS, lowest_intermediate), fraction)
-    scale = 16.0 / 27.0 * const.FINE_STRUCTURE**6 * _ANGULAR[l] * _gap(n) ** 4
+    scale = 16.0 / 27.0 * const.FINE_STRUCTURE**6 * _ANGULAR[l] * gap_hartree(n) ** 4
     rate: FloatArray = scale * np.abs(fraction * (1.0 - fraction)) * amplitude**2
     return rate
 
 
-def _gap(n: int) -> float:
-    """Energy of level n above 1s, in hartree."""
-    return 0.5 - 0.5 / n**2
+def _delta_ev(n: int) -> float:
+    return float(level_energy_ev(n))
 
 
-def _check_level(n: int, l: int) -> None:
-    quantum_numbers("level", n, l)
+def _checked_level(n: int, l: int) -> tuple[int, int]:
+    numbers = quantum_numbers("level", n, l)
+    if numbers[0].size != 1:
+        raise InputError(f"level: n and l are single numbers, not of shape {numbers[0].shape}")
+    n, l = int(numbers[0].item()), int(numbers[1].item())
     if not 2 <= n <= N_MAX or l not in _ANGULAR:
         raise InputError(
             f"level n = {n}, l = {l}: allowed are l = 0 and 2 (ns, nd) with 2 <= n <= {N_MAX}"
         )
+    return n, l
 
 
-def _checked_energy(photon_energy_ev: ArrayLike, lowest: float, highest: float) -> FloatArray:
+def _checked_energy(photon_energy_ev: ArrayLike, lowest_ev: float, highest_ev: float) -> FloatArray:
     energy_ev = np.asarray(photon_energy_ev, dtype=np.float64)
-    inside = (energy_ev >= lowest) & (energy_ev <= highest)
+    inside = (energy_ev >= lowest_ev) & (energy_ev <= highest_ev)
     if not np.all(inside):
         raise RangeError(
-            f"photon_energy_ev = {energy_ev[~inside].flat[0]:g}: allowed are {lowest:.8g} to "
-            f"{highest:.8g} eV"
+            f"photon_energy_ev = {energy_ev[~inside].flat[0]:g}: allowed are {lowest_ev:.8g} to "
+            f"{highest_ev:.8g} eV"
         )
     return energy_ev

@@ -1,7 +1,7 @@
 """Two-photon decay 2s -> 1s of hydrogen and hydrogenic ions, from the second-order matrix element.
 
 The matrix element is that of :mod:`levelnet.atomic.second_order`, in a smaller basis: 2s has no
-level of its own between it and the ground state, and so no resonances.
+level between it and the ground state, and so no resonances.
 """
 
 from __future__ import annotations
@@ -15,7 +15,7 @@ from .. import constants as const
 from ..arrays import FloatArray
 from ..errors import RangeError
 from .levels import reduced_mass_ratio
-from .second_order import SturmianBasis, scaled_amplitude, virtual_states
+from .sturmian import SturmianBasis, scaled_amplitude, virtual_states
 
 # At this exponent the 2p function itself is in the basis, and 18 functions give the total to 1e-13;
 # more change nothing but the run time.
