@@ -25,6 +25,10 @@ COEFFICIENTS = (
     "photoionization_rate",
     "two_photon_rate",
     "two_photon_profile",
+    "two_photon_spectrum_per_s_hz",
+    "raman_spectrum_per_s_hz",
+    "second_order_matrix_element",
+    "lyman_resonances",
     "escape_probability",
 )
 
