@@ -25,7 +25,8 @@ from ..history.outcome import outcome_of, relaxation_hubble
 from ..history.setup import Setup
 from ..network.assembly import Workspace
 from ..network.reduction import exchange_pairs
-from ..network.weights import NodeWeights, add_node_weights, line_places, n_places, transitions
+from ..network.transitions import line_places, n_places, transitions
+from ..network.weights import NodeWeights, add_node_weights
 from ..numerics.collocation import adjoint
 from ..numerics.threads import one_blas_thread
 from ..pieces import Pieces

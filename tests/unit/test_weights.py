@@ -12,7 +12,8 @@ from levelnet.network.assembly import factor_interior
 from levelnet.network.ladder import hydrogen_ladder
 from levelnet.network.rates import stack
 from levelnet.network.reduction import exchange_pairs, reduce_at
-from levelnet.network.weights import NodeWeights, add_node_weights, n_places, transitions
+from levelnet.network.transitions import n_places, transitions
+from levelnet.network.weights import NodeWeights, add_node_weights
 from tests.frozen_differences import slope, with_cross_sections, with_strengths
 
 TWO = ((2, 0), (2, 1))

@@ -14,7 +14,7 @@ import pytest
 from levelnet.errors import AccuracyWarning, InputError, Outcome, SolveError
 from levelnet.history import cost
 from levelnet.history.run import solve
-from levelnet.network.weights import transitions
+from levelnet.network.transitions import transitions
 from levelnet.studies import weigh_budget
 from levelnet.studies.budget import uncertainties_in
 from levelnet.studies.weigh import bytes_per_target, weigh
