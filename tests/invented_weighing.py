@@ -80,6 +80,7 @@ def invented_weighing(
         two_photon=by(count),
         compton=1e-4 * by(count),
         parameter=by(count, len(PARAMETERS)),
+        notes=("every number is INVENTED",),
     )
 
 
@@ -100,6 +101,7 @@ def invented_budget(targets: tuple[str, ...] = ("x_e(900)", "z_*")) -> ErrorBudg
         groups=GROUPS,
         contribution=contribution,
         sources=tuple(f"invented source of {name}, {2000 + k}" for k, name in enumerate(GROUPS)),
+        rows=("two_photon,2s,,0.01,two_photon", "compton,,,1e-6,compton"),
     )
 
 

@@ -31,6 +31,7 @@ EXAMPLE = 'levelnet weigh setup.toml --of "x_e(900)" --of "z_*" --output weights
 _BAND, _MOST = 24, 1000
 _HISTORIES = 3.0  # as long as this many a weighing takes at most
 _DEFAULT_REDSHIFTS = (1100.0, 200.0)
+_SCATTERED = 800.0  # a grid that ends higher may not reach unit optical depth
 
 
 def add_arguments(parser: argparse.ArgumentParser) -> None:
@@ -42,14 +43,15 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
         action="append",
         help="what to weigh, may be repeated: x_e(Z), T_m(Z), optical_depth(Z), line(3d-2p), z_*, "
         "visibility_peak_redshift, visibility_width, last_scattering_time_s, r_s, k_D, z_drag, "
-        "r_drag (default: z_*, x_e(1100) and x_e(200), as far as the grid reaches)",
+        "r_drag (default: what the grid reaches of z_*, x_e(1100) and x_e(200), z_* if it ends at "
+        f"{_SCATTERED:g} or below; x_e at its middle if that is nothing)",
     )
     parser.add_argument(
         "--uncertainties",
         metavar="FILE",
         type=Path,
-        help="uncertainties of the rates for the error budget (CSV; default: a table of published "
-        "ones)",
+        help="uncertainties of the rates for the error budget (CSV; default: the table of the "
+        "project: published numbers and estimates derived from them)",
     )
     parser.add_argument("--no-budget", action="store_true", help="no error budget")
     parser.add_argument(
@@ -137,10 +139,13 @@ def _check_places(
 
 
 def default_targets(setup: Setup) -> list[str]:
-    """What is weighed where nothing is asked for: all of it inside the grid."""
-    grid = setup.grid
-    inside = [z for z in _DEFAULT_REDSHIFTS if grid.redshift_end <= z <= grid.redshift_start]
-    return ["z_*", *(f"x_e({z:g})" for z in inside)]
+    """What is weighed where nothing is asked for: all of it inside the grid, at least one."""
+    start, end = setup.grid.redshift_start, setup.grid.redshift_end
+    scattered = ["z_*"] if end <= _SCATTERED else []
+    inside = [z for z in _DEFAULT_REDSHIFTS if end <= z <= start]
+    if not scattered and not inside:
+        inside = [0.5 * (start + end)]
+    return [*scattered, *(f"x_e({z!r})" for z in inside)]
 
 
 def band_targets(setup: Setup, count: int) -> list[str]:
@@ -149,10 +154,14 @@ def band_targets(setup: Setup, count: int) -> list[str]:
 
     from ..studies.targets import parse_target
 
-    redshifts = np.linspace(setup.grid.redshift_start, setup.grid.redshift_end, count)
-    # The ends as they are, or rounding might lead out of the grid; between, few digits.
-    redshifts[1:-1] = [float(f"{z:.4g}") for z in redshifts[1:-1]]
-    return [parse_target(f"x_e({z!r})").name for z in redshifts.tolist()]
+    if not count:
+        return []
+    start, end = setup.grid.redshift_start, setup.grid.redshift_end
+    # Few digits between the ends, but none that leads out of a narrow grid.
+    between = np.linspace(start, end, count)[1:-1].tolist()
+    rounded = [min(max(float(f"{z:.4g}"), end), start) for z in between]
+    names = [parse_target(f"x_e({z!r})").name for z in (start, *rounded, end)]
+    return list(dict.fromkeys(names))
 
 
 def _weighed(

@@ -37,7 +37,8 @@ def weighing_summary(weighing: Weighing, top: int) -> str:
     targets = values["targets"]
     for first in range(0, len(targets), _COLUMNS):
         lines += _target_tables(targets[first : first + _COLUMNS], top)
-    return "\n".join([*lines, *_source_lines(targets), *_band_lines(values["band"])])
+    lines += [*_source_lines(targets), *_band_lines(values["band"]), ""]
+    return "\n".join([*lines, *(row("note", text) for text in weighing.notes)])
 
 
 def _target_tables(targets: list[dict[str, Any]], top: int) -> list[str]:

@@ -26,6 +26,7 @@ def weighing_values(weighing: Weighing, top: int) -> dict[str, Any]:
         "n_transitions": len(weighing.upper),
         "targets": targets,
         "band": band_values(weighing),
+        "notes": list(weighing.notes),
     }
 
 

@@ -6,17 +6,14 @@ import warnings
 
 from ..errors import AccuracyWarning, InputError
 from ..escape.treatment import LineTreatment
-from ..escape.two_photon import STIMULATED_NOTE
 from ..numerics.threads import one_blas_thread
 from ..pieces import Pieces
 from .cost import check_memory
 from .integrate import Progress, integrate_history
+from .notes import notes_of
 from .outputs import assemble_history
 from .result import History
 from .setup import Setup
-
-# Overridden rates that the notes list one by one; the setup holds all.
-_NOTED = 20
 
 
 def solve(
@@ -72,35 +69,10 @@ def solve(
     check_memory(setup)
     with one_blas_thread():
         integrated = integrate_history(setup, tell, pieces, line_treatment)
-        notes = _notes(setup, integrated.equations.treatment)
+        notes = notes_of(setup, integrated.equations.treatment)
         history = assemble_history(setup, integrated, notes, tell)
     if strict:
         history.require_converged()
     elif not history.outcome.ok:
         warnings.warn(history.outcome.value, AccuracyWarning, stacklevel=2)
     return history
-
-
-def _notes(setup: Setup, chosen: LineTreatment) -> tuple[str, ...]:
-    """What a user must know before relying on the result."""
-    notes = [
-        "helium is neutral and inert: x_e misses its electrons above z ~ 1600, where they count",
-        "excited levels are quasi-steady; there are no collisions and no reionization",
-        f'lines: "{chosen.name}" ({type(chosen).__module__}.{type(chosen).__qualname__})',
-    ]
-    top, n_max = setup.hydrogen.highest_resolved, setup.hydrogen.n_max
-    if top < n_max:
-        notes.insert(
-            2,
-            f"shells n = {top + 1} to {n_max} are populated by statistical weight over l "
-            f"(resolve_l_to = {top})",
-        )
-    notes += [f"lines assume: {text}" for text in chosen.assumes]
-    notes += [f"lines hold for: {text}" for text in chosen.holds_for]
-    if setup.lines.two_photon == "stimulated":
-        notes.append(STIMULATED_NOTE)
-    table = setup.rates.table
-    notes += [f"rate overridden: {one.text} ({one.source})" for one in table[:_NOTED]]
-    if len(table) > _NOTED:
-        notes.append(f"rates overridden: {len(table) - _NOTED} more, listed in the setup")
-    return tuple(notes)

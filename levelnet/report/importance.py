@@ -19,7 +19,7 @@ if TYPE_CHECKING:
 _DECADES = 5  # shown on each side of 0
 _VECTOR_N_MAX = 40  # above, cells are drawn as pixels: 5e4 outlines choke a viewer
 _TICKS = (0, 1, 2, 3, 5, 10, 20, 30, 50, 100, 200, 300, 500, 1000)
-_FEW = 8  # up to this number each one is named
+_FEW = 6  # up to this number each one is named
 _NO_LEVEL = "#dcdcdc"
 
 
@@ -60,6 +60,11 @@ def importance_figure(weighing: Weighing, target: str, label: str) -> Figure:
         _draw_cells(panels[2], _edges(n), _edges(n), shells.T, norm)
         _ticks(panels[2], "y", n)
         panels[2].set_ylabel("lower shell $n$")
+        if not len(weighing.upper):
+            for axes in panels[1:]:
+                axes.text(
+                    0.5, 0.5, "no transitions", transform=axes.transAxes, ha="center", va="center"
+                )
         for axes, letter, title in zip(
             panels,
             "abc",
@@ -80,7 +85,7 @@ def importance_figure(weighing: Weighing, target: str, label: str) -> Figure:
 
 
 def _draw_levels(axes: Axes, drawn: LevelMap, values: FloatArray, norm: SymLogNorm) -> None:
-    """Cells over (n, l); whole shells stand in a strip of their own above the highest l."""
+    """Cells over (n, l); whole shells stand in a strip of their own, over a gap, above all l."""
     whole = drawn.l < 0
     l = drawn.l[~whole]
     edges = _edges(l + 1)
@@ -93,7 +98,6 @@ def _draw_levels(axes: Axes, drawn: LevelMap, values: FloatArray, norm: SymLogNo
         gap = (edges[-1] / edges[0]) ** 0.05
         strip = edges[-1] * np.array([gap, gap**3])
         _draw_cells(axes, _edges(drawn.n), strip, values[:, whole].T, norm)
-        axes.axhspan(edges[-1], float(strip[0]), color="white", linewidth=0.0)
         places.append(float(np.sqrt(strip[0] * strip[1])))
         names.append("all")
     axes.set_yticks(places, names)

@@ -21,7 +21,9 @@ if TYPE_CHECKING:
     from matplotlib.figure import Figure
 
 _BARS = 10  # more would not be legible in half a page's height
-_LETTERS = 26  # in a line of a name beside a bar
+_LETTERS = 32  # of a name beside a bar
+_ROUNDING_POWER = -7  # what is smaller than this part of the largest may be rounding
+_ROUNDING = 10.0**_ROUNDING_POWER
 _SYMBOLS = {
     "hubble_km_s_mpc": "$H_0$",
     "baryon_density_h2": r"$\omega_b$",
@@ -148,7 +150,12 @@ def ranking_figure(weighing: Weighing, target: str) -> Figure:
         panels = figure.subplots(2, 2).ravel()
         _process_bars(panels[0], weighing, at)
         transitions = top_transitions(weighing, target, _BARS)
-        draw_bars(panels[1], [one.name for one in transitions], [one.weight for one in transitions])
+        draw_bars(
+            panels[1],
+            [one.name for one in transitions],
+            [one.weight for one in transitions],
+            "all are 0" if len(weighing.upper) else "no transitions",
+        )
         shares = by_level(weighing, target)
         order = np.argsort(-np.abs(shares.bound_free), kind="stable")[:_BARS]
         first = [k for k in order if shares.bound_free[k] != 0.0]
@@ -156,8 +163,9 @@ def ranking_figure(weighing: Weighing, target: str) -> Figure:
         titles = ["processes, parameters", "dipole transitions", "cross sections of levels"]
         if budget is not None and target in budget.targets:
             ranked = [one for one in budget.ranked(target)[:_BARS] if one.contribution != 0.0]
-            names = [_folded(one.group) for one in ranked]
+            names = [_cut(one.group) for one in ranked]
             draw_bars(panels[3], names, [one.contribution for one in ranked])
+            panels[3].tick_params(axis="y", labelsize=6.5)
             sigma = float(budget.sigma[budget.targets.index(target)])
             titles.append(rf"error budget, 1$\sigma$ = {100.0 * sigma:.2g} % in all")
         for axes, letter, title in zip(panels, "abcd", titles, strict=False):
@@ -181,54 +189,73 @@ def _process_bars(axes: Axes, weighing: Weighing, at: int) -> None:
     draw_bars(axes, ranked, [values[name] for name in ranked])
 
 
-def draw_bars(axes: Axes, names: Sequence[str], values: Sequence[float]) -> None:
-    """Draw horizontal bars of sizes, the first on top; what is 0 or NaN has a name but no bar."""
+def draw_bars(
+    axes: Axes, names: Sequence[str], values: Sequence[float], nothing: str = "all are 0"
+) -> None:
+    """Draw horizontal bars of sizes, the first on top.
+
+    What is 0, NaN or at the level of rounding has words in place of a bar; without any bar the
+    panel says `nothing`.
+    """
     from matplotlib.ticker import NullFormatter
 
-    sizes = np.abs(np.array(values, dtype=float))
-    seen = np.isfinite(sizes) & (sizes > 0.0)
-    top = float(sizes[seen].max()) if seen.any() else 1.0
-    smallest = float(sizes[seen].min()) if seen.any() else 1.0
-    # Two decades at least in all, or small differences look large; at most six of bars.
-    low = float(np.clip(0.3 * smallest, 1e-6 * top, 0.025 * top))
+    sizes = np.nan_to_num(np.abs(np.array(values, dtype=float)))
+    top = float(sizes.max(initial=0.0))
+    if top == 0.0:
+        axes.text(0.5, 0.5, nothing, transform=axes.transAxes, ha="center", va="center")
+        axes.set_xticks([])
+        axes.set_yticks([])
+        return
+    seen = sizes >= _ROUNDING * top
+    # Two decades at least in all, or small differences look large.
+    low = float(np.clip(0.3 * sizes[seen].min(), _ROUNDING * top, 0.025 * top))
     for place, value in enumerate(values):
-        if not seen[place]:
-            continue
-        negative = value < 0.0
-        axes.barh(
-            place,
-            max(abs(value) - low, 0.0),
-            left=low,
-            height=0.7,
-            color="white" if negative else style.BLUE,
-            edgecolor=style.ORANGE if negative else style.BLUE,
-            hatch="//////" if negative else None,
-            linewidth=0.8,
-        )
+        if seen[place]:
+            _draw_bar(axes, place, value, low)
+        text = _signed(value) if seen[place] else _in_words(value)
         axes.annotate(
-            _signed(value),
-            (max(abs(value), low), place),
+            text,
+            (max(float(sizes[place]), low), place),
             xytext=(2, 0),
             textcoords="offset points",
             va="center",
             fontsize=6.0,
         )
-    if not seen.any():
-        axes.text(0.5, 0.5, "all are 0", transform=axes.transAxes, ha="center", va="center")
     axes.set_xscale("log")
     axes.xaxis.set_minor_formatter(NullFormatter())
     # Room for the numbers behind the bars.
-    axes.set_xlim(low, top * (top / low) ** 0.3)
+    axes.set_xlim(low, top * (top / low) ** 0.45)
     axes.set_yticks(range(len(names)), names)
     axes.set_ylim(max(len(names), _BARS // 2) - 0.4, -0.6)
     axes.tick_params(axis="y", length=0)
 
 
-def _folded(text: str) -> str:
-    """Break a long name into lines, and cut off what would be a fourth."""
-    import textwrap
+def _draw_bar(axes: Axes, place: int, value: float, low: float) -> None:
+    negative = value < 0.0
+    axes.barh(
+        place,
+        abs(value) - low,
+        left=low,
+        height=0.7,
+        color="white" if negative else style.BLUE,
+        edgecolor=style.ORANGE if negative else style.BLUE,
+        hatch="//////" if negative else None,
+        linewidth=0.8,
+    )
 
-    return "\n".join(textwrap.wrap(text, _LETTERS, max_lines=3, placeholder=" ..."))
+
+def _in_words(value: float) -> str:
+    """Say why there is no bar."""
+    if value == 0.0:
+        return "0"
+    return (
+        rf"below $10^{{{_ROUNDING_POWER}}}$ of the largest" if np.isfinite(value) else "undefined"
+    )
+
+
+def _cut(text: str) -> str:
+    """Bring a long name into one line."""
+    return text if len(text) <= _LETTERS else f"{text[: _LETTERS - 3].rstrip()}..."
 
 
 def _signed(value: float) -> str:

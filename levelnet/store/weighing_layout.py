@@ -21,6 +21,12 @@ def _end(name: str) -> Variable:
     return Variable(name, ("transition",), "1", text, name, "int64")
 
 
+def _value(field: str) -> Variable:
+    # The targets have units of their own, so that the array has none.
+    text = "value of the target, in the unit that `unit` names"
+    return Variable("value", ("target",), "", text, field)
+
+
 def _weight(name: str, of: str, over: str = "", field: str = "") -> Variable:
     """Derivative of ln of each target by ln of a rate."""
     dimensions = ("target", over) if over else ("target",)
@@ -40,7 +46,7 @@ WEIGHING = Group(
     (
         _text("target", "target", "scalar of the history", "targets"),
         _text("unit", "target", "unit of the value of the target", "units"),
-        Variable("value", ("target",), "1", "value of the target in its unit", "value"),
+        _value("value"),
         _position("level", "position of the level, from 0"),
         _level("n", "1", "principal quantum number", "int64"),
         _level("l", "1", "orbital quantum number; -1 for a whole shell", "int64"),
@@ -67,7 +73,7 @@ BUDGET = Group(
     (
         _text("target", "target", "scalar of the history", "budget.targets"),
         _text("unit", "target", "unit of the value of the target", "budget.units"),
-        Variable("value", ("target",), "1", "value of the target in its unit", "budget.value"),
+        _value("budget.value"),
         _text("group", "group", "rates that err together", "budget.groups"),
         _text("source", "group", "where their uncertainty comes from", "budget.sources"),
         _text("row", "row", "what was assumed: selector, sigma, group", "budget.rows"),
@@ -87,7 +93,7 @@ WEIGHING_LAYOUT = Layout(
     1,
     "a weighing",
     layout.ROOT_ATTRIBUTES,
-    (WEIGHING,),
+    (WEIGHING, layout.NOTES),
     (BUDGET,),
 )
 

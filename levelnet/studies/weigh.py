@@ -21,6 +21,7 @@ from ..background.parameters import COSMOLOGICAL, helium_mass_fraction
 from ..errors import InputError
 from ..history.cost import check_memory
 from ..history.integrate import Progress
+from ..history.notes import notes_of
 from ..history.outcome import outcome_of, relaxation_hubble
 from ..history.setup import Setup
 from ..network.assembly import Workspace
@@ -191,6 +192,7 @@ def _assemble(
         direct.two_photon / value,
         direct.compton / value,
         parameter,
+        notes=notes_of(setup, history.equations.treatment),
     )
 
 

@@ -12,7 +12,7 @@ from ..history.integrate import Progress
 from ..history.setup import Setup
 from ..pieces import Pieces
 from . import weigh as engine
-from .budget import ErrorBudget, Uncertainty, error_budget
+from .budget import ErrorBudget, Uncertainty, error_budget, load_uncertainties
 from .weighing import Weighing
 
 # Of the free memory, what the derivatives of one part may take.
@@ -57,7 +57,43 @@ def weigh_with_budget(
         budgets.append(error_budget(found, uncertainties))
         kept = found.first(len(targets)) if kept is None else kept
     assert kept is not None
-    return dataclasses.replace(kept, budget=joined(budgets))
+    notes = (*kept.notes, *budget_notes(setup, uncertainties))
+    return dataclasses.replace(kept, budget=joined(budgets), notes=notes)
+
+
+def budget_notes(setup: Setup, uncertainties: Sequence[Uncertainty]) -> tuple[str, ...]:
+    """What to know of a budget by the default table; nothing where one's own is used instead.
+
+    Parameters
+    ----------
+    setup : Setup
+        Of the history that was weighed.
+    uncertainties : sequence of Uncertainty
+        Rows of the budget.
+
+    Returns
+    -------
+    tuple of str
+        One statement each.
+    """
+    default = load_uncertainties()
+    used = [one for one in uncertainties if one in default]
+    if not used:
+        return ()
+    notes = [
+        "error budget: most rows of the default table are estimates; each source says how made"
+    ]
+    lines = setup.lines
+    if lines.hydrogen != "sobolev":
+        notes.append(f'error budget: the error of lines = "{lines.hydrogen}" is not in it')
+    elif any(one.selector.process == "escape" for one in used):
+        notes.append(
+            "error budget: rows on escape stand for what Sobolev escape leaves out, shifts of "
+            "known sign, not uncertain rates"
+        )
+    if lines.two_photon == "stimulated":
+        notes.append('error budget: the error of two_photon = "stimulated" is not in it')
+    return tuple(notes)
 
 
 def joined(budgets: Sequence[ErrorBudget]) -> ErrorBudget:

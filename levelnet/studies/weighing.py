@@ -56,6 +56,8 @@ class Weighing:
     budget : ErrorBudget or None
         What uncertain rates make of these targets, and of further ones such as a band of x_e(z),
         where that was asked for.
+    notes : tuple of str
+        What to know before relying on it: of the history, and of the uncertainties of the budget.
     """
 
     setup: Setup
@@ -75,6 +77,7 @@ class Weighing:
     compton: FloatArray
     parameter: FloatArray
     budget: ErrorBudget | None = None
+    notes: tuple[str, ...] = ()
 
     def __post_init__(self) -> None:
         """Check shapes and make every array read-only."""

@@ -42,6 +42,7 @@ CASES: dict[str, Callable[[], Weighing]] = {
     "one target": lambda: invented_weighing(("z_*",)),
     "whole shells": lambda: invented_weighing(n_max=6, whole_from=4),
     "no transition": lambda: invented_weighing(n_max=2),
+    "no notes": lambda: dataclasses.replace(invented_weighing(TARGETS), notes=()),
     "no open line": lambda: dataclasses.replace(
         invented_weighing(TARGETS), lines=(), escape=np.zeros((2, 0))
     ),
@@ -113,13 +114,22 @@ def test_weights_open_in_xarray_by_name(stored: Path) -> None:
         assert str(file.source.sel(group="compton").values) == weighing.budget.sources[4]
 
 
+def test_values_with_units_of_their_own_carry_none(stored: Path) -> None:
+    with h5py.File(stored) as file:
+        for group in ("weighing", "budget"):
+            assert "units" not in file[group]["value"].attrs
+            assert "unit" in file[group]
+        assert file["budget"]["sigma"].attrs["units"] == "1"
+        assert tuple(file["notes"]["note"].asstr()) == complete().notes
+
+
 def test_weighing_is_no_table(stored: Path) -> None:
     with pytest.raises(FileFormatError, match=r"w\.h5: holds a weighing, not a table"):
         read_table(stored)
 
 
 def test_what_cannot_be_stored_is_one_line(tmp_path: Path) -> None:
-    with pytest.raises(InputError, match="a dict cannot be stored; a History, EffectiveTable or W"):
+    with pytest.raises(InputError, match=r"a dict cannot be stored; a History, an Eff.*Weighing"):
         levelnet.write({}, tmp_path / "x.h5")
     assert list(tmp_path.iterdir()) == []
 
@@ -183,6 +193,7 @@ def with_attribute(name: str, value: str | int) -> Callable[[Content], None]:
 
 SPOILT: dict[str, tuple[Callable[[Content], None], str]] = {
     "no bound_free": (without("weighing/bound_free"), "damaged: weighing/bound_free is missing"),
+    "no notes": (without("notes/note"), "damaged: notes/note is missing"),
     "half a budget": (without("budget/sigma"), "damaged: budget/sigma is missing"),
     "short value": (with_values("weighing/value", lambda x: x[:1]), "damaged"),
     "upper too high": (with_values("weighing/upper", lambda x: x + 10**6), "upper: names levels"),

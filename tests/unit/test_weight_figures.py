@@ -8,12 +8,14 @@ from pathlib import Path
 
 import numpy as np
 import pytest
+from matplotlib.figure import Figure
 
 from levelnet.errors import InputError
 from levelnet.report.budget import band_figure
 from levelnet.report.importance import importance_figure
 from levelnet.report.style import house_style, render
 from levelnet.report.weights import (
+    draw_bars,
     figure_paths,
     file_names,
     ranking_figure,
@@ -136,14 +138,53 @@ def test_all_text_lies_inside_the_figure(case: str) -> None:
                     assert -1.0 <= box.y0 <= box.y1 <= height + 1.0
 
 
-def test_long_names_of_groups_are_folded() -> None:
+def test_long_names_of_groups_take_one_line() -> None:
     weighing = complete()
     name = "every dipole transition between levels that nobody ever measured to a per cent, twice"
     budget = dataclasses.replace(weighing.budget, groups=(name, *GROUPS[1:]))
     axes = ranking_figure(dataclasses.replace(weighing, budget=budget), TARGET).axes[3]
-    longest = max((text.get_text() for text in axes.get_yticklabels()), key=len)
-    assert max(map(len, longest.split("\n"))) <= 26
-    assert longest.endswith(" ...")
+    names = [text.get_text() for text in axes.get_yticklabels()]
+    assert "every dipole transition betwe..." in names
+    assert set(names) - set(GROUPS) == {"every dipole transition betwe..."}
+
+
+@pytest.mark.parametrize("case", ["usual", "one shell", "whole shells"])
+def test_numbers_behind_bars_stay_inside_the_frame(case: str) -> None:
+    figure = ranking_figure(complete(**CASES[case]), TARGET)
+    with house_style():
+        figure.draw_without_rendering()
+        for axes in figure.axes:
+            for text in axes.texts:
+                assert text.get_window_extent().x1 < axes.get_window_extent().x1
+
+
+def test_what_may_be_rounding_is_said_in_words() -> None:
+    axes = Figure().add_subplot()
+    draw_bars(axes, list("abcde"), [13.0, -2e-6, 1.2e-6, 0.0, np.nan])
+    assert len(axes.patches) == 2
+    said = [text.get_text() for text in axes.texts]
+    assert said[2:] == ["below $10^{-7}$ of the largest", "0", "undefined"]
+
+
+@pytest.mark.parametrize(
+    ("options", "said"),
+    [({"n_max": 2}, "no transitions"), ({"n_max": 4, "scale": 0.0}, "all are 0")],
+)
+def test_panel_of_nothing_says_so_and_has_no_ticks(options: dict[str, float], said: str) -> None:
+    axes = ranking_figure(invented_weighing(**options), TARGET).axes[1]
+    assert [text.get_text() for text in axes.texts] == [said]
+    assert len(axes.get_xticks()) == len(axes.get_yticks()) == 0
+    assert axes.get_xscale() == "linear"
+    panels = importance_figure(invented_weighing(n_max=2), TARGET, "J").axes[1:3]
+    assert all(one.texts[0].get_text() == "no transitions" for one in panels)
+
+
+def test_gap_below_whole_shells_has_the_colour_of_no_level() -> None:
+    left = importance_figure(complete(**CASES["whole shells"]), TARGET, "J").axes[0]
+    # Nothing but the cells is drawn over the background, which differs from the colour of 0.
+    assert len(left.collections) == 2
+    assert len(left.patches) == 0
+    assert left.get_facecolor() != left.collections[0].to_rgba(0.0)
 
 
 def test_files_are_whole_and_the_same_each_time(tmp_path: Path) -> None:

@@ -21,8 +21,12 @@ import pytest
 
 import levelnet
 from levelnet.cli.main import main
+from levelnet.cli.weigh import band_targets, default_targets
 from levelnet.errors import InputError, Outcome, SolveError
+from levelnet.escape.lines import Lines
+from levelnet.studies.budget import load_uncertainties
 from levelnet.studies.groups import top_transitions
+from levelnet.studies.weigh_budget import budget_notes
 from levelnet.studies.weighing import Weighing
 from tests.invented_weighing import PARAMETERS, invented_weighing
 
@@ -140,6 +144,26 @@ def test_what_is_weighed_unless_told(
     assert (min(redshifts), max(redshifts)) == (500.0, 1700.0)
 
 
+@pytest.mark.parametrize(
+    ("start", "end", "expected"),
+    [
+        (1800.0, 800.0, ["z_*", "x_e(1100.0)"]),
+        (1700.0, 801.0, ["x_e(1100.0)"]),
+        (9000.0, 5000.0, ["x_e(7000.0)"]),
+        (1000.0002, 1000.0001, ["x_e(1000.00015)"]),
+        (0.5, 0.0, ["z_*"]),
+    ],
+)
+def test_any_grid_has_something_to_weigh(start: float, end: float, expected: list[str]) -> None:
+    cosmology = {"hubble_km_s_mpc": 68.0, "baryon_density_h2": 0.0224, "matter_density_h2": 0.142}
+    grid = {"redshift_start": start, "redshift_end": end}
+    setup = levelnet.Setup(cosmology=cosmology, hydrogen={"n_max": 3}, grid=grid)
+    assert default_targets(setup) == expected
+    band = [float(name[4:-1]) for name in band_targets(setup, 24)]
+    assert (band[0], band[-1]) == (start, end)
+    assert band == sorted(set(band), reverse=True)
+
+
 def test_cache_is_left_alone_if_asked(folder: Path, asked: list[dict[str, Any]]) -> None:
     assert main(["weigh", "good.toml", "--quiet"]) == 0
     assert main(["weigh", "good.toml", "--quiet", "--no-cache"]) == 0
@@ -210,13 +234,16 @@ def test_show_says_the_same(
     again = numbers(capsys)
     assert len(again["written"]) == 6
     assert Path("w-figures/map-x_e-900.svg").is_file()
-    for key in ("value", "processes", "parameters", "targets", "band", "top"):
+    assert first["notes"][0] == "every number is INVENTED"
+    assert any("of the default table are estimates" in note for note in first["notes"])
+    for key in ("value", "processes", "parameters", "targets", "band", "top", "notes"):
         assert again[key] == first[key]
     assert main(["show", "w.h5"]) == 0
     shown = capsys.readouterr().out
     assert main(["weigh", "good.toml", "--of", "x_e(900)"]) == 0
     printed = capsys.readouterr().out
     assert shown.split("\nfile ")[0] == printed.split("\ntime ")[0]
+    assert re.search(r"^note +every number is INVENTED$", shown, re.M)
     for words in (["--csv"], ["--redshift", "5", "--plot"], ["--export", "csv"]):
         assert main(["show", "w.h5", *words]) == 2
         assert "not for a weighing" in complaint(capsys)
@@ -338,6 +365,33 @@ def test_interrupt_ends_with_130_and_leaves_nothing(folder: Path) -> None:
     assert out == ""
     assert rest == "levelnet: interrupted; no file was left half-written\n"
     assert sorted(path.name for path in folder.iterdir()) == ["good.toml", "large.toml"]
+
+
+def test_notes_are_those_of_the_history_and_of_the_budget(
+    folder: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    text = GOOD.replace("150.0", "900.0").replace("n_max = 5", "n_max = 3")
+    rate = '[rates]\nrows = ["bound_free,3,,1.02,,INVENTED laboratory"]\n'
+    lines = '[lines]\nhydrogen = "closed"\ntwo_photon = "stimulated"\n'
+    (folder / "good.toml").write_text(text + rate + lines)
+    (folder / "own.csv").write_text(
+        "process,upper,lower,sigma,group,source\ntwo_photon,,,0.01,,INVENTED\n"
+    )
+    history = list(levelnet.solve(levelnet.load_setup("good.toml")).notes)
+    assert any("INVENTED laboratory" in note for note in history)
+    words = ["weigh", "good.toml", "--of", "x_e(1000)", "--json", "--band", "0"]
+    assert main([*words, "--uncertainties", "own.csv"]) == 0
+    assert numbers(capsys)["notes"] == history
+    # The default table: what it holds, and what it does not.
+    setup = levelnet.load_setup("good.toml")
+    table = [one for one in load_uncertainties() if one.selector.process != "escape"]
+    told = " | ".join(budget_notes(setup, table))
+    assert "estimates" in told
+    assert 'lines = "closed" is not in it' in told
+    assert 'two_photon = "stimulated" is not in it' in told
+    usual = dataclasses.replace(setup, lines=Lines())
+    assert "rows on escape" in " | ".join(budget_notes(usual, load_uncertainties()))
+    assert len(budget_notes(usual, table)) == 1
 
 
 def test_derivatives_are_what_a_changed_setup_does(

@@ -1,0 +1,48 @@
+"""What to know before relying on a history."""
+
+from __future__ import annotations
+
+from ..escape.treatment import LineTreatment
+from ..escape.two_photon import STIMULATED_NOTE
+from .setup import Setup
+
+# Overridden rates that the notes list one by one; the setup holds all.
+_NOTED = 20
+
+
+def notes_of(setup: Setup, chosen: LineTreatment) -> tuple[str, ...]:
+    """What a user must know before relying on a history, or on what is made from it.
+
+    Parameters
+    ----------
+    setup : Setup
+        What was computed.
+    chosen : LineTreatment
+        The treatment of the resonance lines that was used.
+
+    Returns
+    -------
+    tuple of str
+        One statement each; overridden rates come last, with their sources.
+    """
+    notes = [
+        "helium is neutral and inert: x_e misses its electrons above z ~ 1600, where they count",
+        "excited levels are quasi-steady; there are no collisions and no reionization",
+        f'lines: "{chosen.name}" ({type(chosen).__module__}.{type(chosen).__qualname__})',
+    ]
+    top, n_max = setup.hydrogen.highest_resolved, setup.hydrogen.n_max
+    if top < n_max:
+        notes.insert(
+            2,
+            f"shells n = {top + 1} to {n_max} are populated by statistical weight over l "
+            f"(resolve_l_to = {top})",
+        )
+    notes += [f"lines assume: {text}" for text in chosen.assumes]
+    notes += [f"lines hold for: {text}" for text in chosen.holds_for]
+    if setup.lines.two_photon == "stimulated":
+        notes.append(STIMULATED_NOTE)
+    table = setup.rates.table
+    notes += [f"rate overridden: {one.text} ({one.source})" for one in table[:_NOTED]]
+    if len(table) > _NOTED:
+        notes.append(f"rates overridden: {len(table) - _NOTED} more, listed in the setup")
+    return tuple(notes)
