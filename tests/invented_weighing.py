@@ -8,7 +8,7 @@ import numpy as np
 
 from levelnet.atomic.levels import LevelSet, hydrogenic_levels
 from levelnet.errors import Outcome
-from levelnet.studies.budget import ErrorBudget
+from levelnet.studies.budget_record import ErrorBudget
 from levelnet.studies.weighing import Weighing
 from tests.invented_history import invented_setup
 

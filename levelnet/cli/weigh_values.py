@@ -5,7 +5,7 @@ from __future__ import annotations
 from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
-    from ..studies.budget import ErrorBudget
+    from ..studies.budget_record import ErrorBudget
     from ..studies.groups import Shares
     from ..studies.weighing import Weighing
 

@@ -7,7 +7,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from ..arrays import FloatArray
-from ..studies.budget import ErrorBudget
+from ..studies.budget_record import ErrorBudget
 from ..studies.groups import electron_rows
 from . import style
 

@@ -202,7 +202,7 @@ def table_of(content: Content) -> EffectiveTable:
 
 def weighing_of(content: Content) -> Weighing:
     """Make the weighing that :func:`levelnet.store.write.content_of` took apart."""
-    from ..studies.budget import ErrorBudget
+    from ..studies.budget_record import ErrorBudget
     from ..studies.weighing import Weighing
 
     parts = _all_fields(content, WEIGHING_LAYOUT)

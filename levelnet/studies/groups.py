@@ -10,7 +10,7 @@ import numpy as np
 
 from ..arrays import FloatArray, IntArray, frozen_array
 from ..atomic.levels import LevelSet, level_name
-from .budget import ErrorBudget
+from .budget_record import ErrorBudget
 from .weighing import Weighing
 
 

@@ -12,7 +12,8 @@ from ..history.integrate import Progress
 from ..history.setup import Setup
 from ..pieces import Pieces
 from . import weigh as engine
-from .budget import ErrorBudget, Uncertainty, error_budget, load_uncertainties
+from .budget import Uncertainty, error_budget, load_uncertainties
+from .budget_record import ErrorBudget
 from .weighing import Weighing
 
 # Of the free memory, what the derivatives of one part may take.

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, replace
-from typing import TYPE_CHECKING
 
 import numpy as np
 
@@ -11,10 +10,8 @@ from ..arrays import FloatArray, IntArray, frozen_array
 from ..atomic.levels import LevelSet
 from ..errors import InputError, Outcome
 from ..history.setup import Setup
+from .budget_record import ErrorBudget
 from .targets import parse_target
-
-if TYPE_CHECKING:
-    from .budget import ErrorBudget
 
 
 @dataclass(frozen=True, slots=True, eq=False)

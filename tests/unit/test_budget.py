@@ -13,12 +13,12 @@ from levelnet.atomic.levels import hydrogenic_levels
 from levelnet.errors import InputError, Outcome, TableError
 from levelnet.studies import budget as room
 from levelnet.studies.budget import (
-    Contribution,
     derivatives,
     error_budget,
     load_uncertainties,
     uncertainties_in,
 )
+from levelnet.studies.budget_record import Contribution
 from levelnet.studies.weighing import Weighing
 from levelnet.tables import read_table
 from tests.small_runs import small_setup
