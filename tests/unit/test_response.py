@@ -168,7 +168,7 @@ def test_files_that_cannot_be_read(tmp_path: Path, monkeypatch: pytest.MonkeyPat
             read_response(path)
     monkeypatch.setattr("levelnet.studies.response._MAX_BYTES", 10)
     (tmp_path / "large.csv").write_text(TEXT)
-    with pytest.raises(InputError, match="over 0 MB, no response"):
+    with pytest.raises(InputError, match="over 10 bytes"):
         read_response(tmp_path / "large.csv")
 
 
