@@ -28,7 +28,7 @@ from levelnet.background import (
     with_expansion,
     write_expansion_table,
 )
-from levelnet.errors import AccuracyWarning, FileFormatError, InputError, RangeError
+from levelnet.errors import AccuracyWarning, InputError, RangeError
 from levelnet.history.setup import Setup, parse_setup
 from tests.tolerances import ORDER, ROUND_OFF
 
