@@ -86,10 +86,10 @@ def resolve_figure(study: LevelStudy) -> Figure:
         labels = [rf"$n \leq {top}$" for top in resolved.resolve_l_to.tolist()]
         draw_rungs(axes, study.redshift, changes, labels)
         top = max(float(np.max(np.abs(changes))), SMALLEST)
-        axes.set_yscale("symlog", linthresh=_SIGNED_DECADES * top)
+        linear = 10.0 ** np.ceil(np.log10(_SIGNED_DECADES * top))  # at a tick
+        axes.set_yscale("symlog", linthresh=linear)
         low, high = float(np.min(changes)), float(np.max(changes))
-        edge = 2.0 * _SIGNED_DECADES * top
-        axes.set_ylim(min(2.0 * low, -edge), max(2.0 * high, edge))
+        axes.set_ylim(min(2.0 * low, -2.0 * linear), max(2.0 * high, 2.0 * linear))
         axes.axhline(0.0, color=style.GREY, linewidth=0.6, zorder=0)
         axes.set_ylabel(r"$\Delta x_e / x_e$ from whole shells")
         axes.legend(loc="best", fontsize=6.5, title=r"$l$ resolved", title_fontsize=6.5)
