@@ -158,7 +158,7 @@ def whole_numbers(option: str, text: str) -> tuple[int, ...]:
     """Read whole numbers with commas between; InputError names the option and the part."""
     parts = text.replace(" ", "").split(",")
     for part in parts:
-        if not (part.isascii() and part.isdigit() and len(part) <= 6):
+        if not (part.isascii() and part.isdigit() and len(part) <= 18):
             raise InputError(
                 f'{option}: "{part}" is no whole number; write values such as 20,30,45'
             )

@@ -141,7 +141,7 @@ def test_default_range_is_what_the_outputs_cover(
     assert main([*words, "--workers", "1"]) == 0
     said = capsys.readouterr().out
     assert "for 0.1 % in x_e at 900 < z < 1600: " in said
-    assert "against every l resolved: none of those tried is enough (l resolved to n = 6" in said
+    assert "against every l resolved: l resolved to n = 6 (of 6 tried, at n_max = 8)" in said
     assert "the outputs end at z = 900" in said
 
 
