@@ -8,8 +8,8 @@ from ..arrays import FloatArray, IntArray, frozen_array
 from ..errors import Outcome
 from ..history.setup import Setup
 
-# Outputs that end above it leave too many electrons out of the optical depth: z_* of n_max = 8 is
-# (the demo) is 0.08 % too high with an end at 400, and 0.5 % with one at 800.
+# Outputs that end above it leave too many electrons out of the optical depth: z_* of the demo with
+# n_max = 8 is 0.08 % too high with an end at 400, and 0.5 % with one at 800.
 _LATEST_END = 200.0
 
 
