@@ -8,7 +8,7 @@ from pathlib import Path
 
 from .errors import InputError
 
-_MEGABYTE = 1_000_000
+_UNITS = ((1_000_000, "MB"), (1000, "kB"), (1, "bytes"))
 
 
 def read_bytes(path: str | Path, most_bytes: int) -> bytes:
@@ -19,7 +19,7 @@ def read_bytes(path: str | Path, most_bytes: int) -> bytes:
     path : str or Path
         The file.
     most_bytes : int
-        Largest size allowed, in whole megabytes.
+        Largest size allowed.
 
     Raises
     ------
@@ -39,7 +39,7 @@ def read_bytes(path: str | Path, most_bytes: int) -> bytes:
         reason = (error.strerror if isinstance(error, OSError) else None) or str(error)
         raise InputError(f"{path}: cannot be read: {reason}") from None
     if len(content) > most_bytes:
-        raise InputError(f"{path}: over {most_bytes // _MEGABYTE} MB")
+        raise InputError(f"{path}: over {_size(most_bytes)}")
     return content
 
 
@@ -50,3 +50,8 @@ def read_text(path: str | Path, most_bytes: int, encoding: str = "utf-8") -> str
     except UnicodeDecodeError:
         name = "plain ASCII" if encoding == "ascii" else "UTF-8"
         raise InputError(f"{path}: not {name} text") from None
+
+
+def _size(count: int) -> str:
+    unit, name = next(one for one in _UNITS if count >= one[0])
+    return f"{count / unit:g} {name}"

@@ -16,39 +16,34 @@ if TYPE_CHECKING:
 
 def level_values(study: LevelStudy, found: Verdict, met: Demands | None = None) -> dict[str, Any]:
     """Collect a study, whole, with its verdict on x_e and, where asked, on a requirement."""
+    from ..studies.level_checks import check_held_out, check_limit
     from ..studies.level_requirement import demands_text
-    from ..studies.verdict import (
-        population_changes,
-        rung_errors,
-        shell_changes,
-        verdict_text,
-    )
+    from ..studies.verdict import population_changes, rung_errors, verdict_text
 
-    held, rungs = study.held_out, study.rungs
+    rungs = study.rungs
     return {
         "title": study.setup.title,
         "setup_digest": study.setup.digest,
         "outcome": study.outcome.name,
         "ok": study.outcome.ok,
         "rungs": {
-            **_plain_rungs(rungs),
+            **_plain(rungs),
             "largest_error": rung_errors(study, found.low, found.high),
             "largest_population_change": population_changes(study),
         },
         "redshift": study.redshift,
         "observable_names": study.observable_names,
         "observable_units": study.observable_units,
+        "population_redshift": study.population_redshift,
+        "level_n": study.level_n,
+        "level_l": study.level_l,
         "limit": _plain(study.limit),
+        "limit_check": _plain(check_limit(study)),
         "noise": _plain(study.noise),
         "held_out": None
-        if held is None
-        else {"n_max": held.n_max, "foreseen": _plain(held.foreseen), **_held_out_figures(study)},
-        "resolved": None
-        if study.resolved is None
-        else {
-            **_plain_rungs(study.resolved),
-            "largest_change": shell_changes(study, found.low, found.high),
-        },
+        if study.held_out is None
+        else {**_plain(study.held_out), **_plain(check_held_out(study))},
+        "resolved": None if study.resolved is None else _resolved_values(study, found),
         "verdict": {
             **dataclasses.asdict(found),
             "text": verdict_text(found, int(rungs.n_max[-1])),
@@ -69,12 +64,20 @@ def _plain(record: Any) -> Any:
     return record
 
 
-def _plain_rungs(rungs: Any) -> dict[str, Any]:
-    return {name: value for name, value in _plain(rungs).items() if name != "population"}
+def _resolved_values(study: LevelStudy, found: Verdict) -> dict[str, Any]:
+    from ..studies.level_checks import enough_resolved, resolved_text, shell_changes
+
+    return {
+        **_plain(study.resolved),
+        "largest_change": shell_changes(study, found.low, found.high),
+        "enough": enough_resolved(study, found.within, found.low, found.high),
+        "text": resolved_text(study, found.within, found.low, found.high),
+    }
 
 
 def level_summary(study: LevelStudy, found: Verdict, met: Demands | None = None) -> str:
     """Return the summary of a study as lines of plain text."""
+    from ..studies.level_checks import resolved_text
     from ..studies.level_requirement import demands_text
     from ..studies.verdict import verdict_text
 
@@ -88,10 +91,13 @@ def level_summary(study: LevelStudy, found: Verdict, met: Demands | None = None)
         "",
         *_limit_lines(study),
         "",
+        *_observable_lines(study),
+        "",
     ]
     body = [row("verdict", verdict_text(found, int(study.rungs.n_max[-1])))]
     if study.resolved is not None:
         head += [*_resolved_lines(study, found), ""]
+        body.append(row("verdict", resolved_text(study, found.within, found.low, found.high)))
     if met is not None:
         head += [*_demand_lines(study, met), ""]
         body.append(row("verdict", demands_text(met, int(study.rungs.n_max[-1]))))
@@ -102,7 +108,7 @@ def level_summary(study: LevelStudy, found: Verdict, met: Demands | None = None)
 
 def _resolved_lines(study: LevelStudy, found: Verdict) -> list[str]:
     """What whole shells above some n do to x_e of the longest rung."""
-    from ..studies.verdict import shell_changes
+    from ..studies.level_checks import shell_changes
 
     assert study.resolved is not None
     changes = shell_changes(study, found.low, found.high)
@@ -182,44 +188,72 @@ def _limit_lines(study: LevelStudy) -> list[str]:
     return aligned([head, *body], right=True)
 
 
-def _held_out_figures(study: LevelStudy) -> dict[str, Any]:
-    """Of each rung held out: largest miss over its bar, and largest bar over the correction."""
-    import numpy as np
-
-    assert study.held_out is not None
-    count = len(study.held_out.n_max)
-    seen = study.held_out.foreseen.free_electron_fraction
-    actual = study.rungs.free_electron_fraction[-count:]
-    before = study.rungs.free_electron_fraction[-count - 1]
-    miss = np.abs(np.log(seen.value / actual)) / seen.relative_error
-    with np.errstate(divide="ignore"):
-        bar = seen.relative_error / np.abs(np.log(seen.value / before))
-    asked = (study.redshift >= 200.0) & (study.redshift <= 1600.0) & (seen.fitted == 1)
-    return {
-        "largest_miss_over_bar": np.max(miss, axis=1),
-        "largest_bar_over_correction": np.max(np.where(asked, bar, 0.0), axis=1),
-    }
+def _observable_lines(study: LevelStudy) -> list[str]:
+    """What an observer sees, for all levels."""
+    limit = study.limit.observable
+    head = ("observable, all levels", "value", "error bar", "unit")
+    body = [
+        (
+            _SHORT.get(name, name),
+            f"{value:.8g}" if math.isfinite(value) else "not reached",
+            f"{value * bar:.1e}" if math.isfinite(value) else "-",
+            "" if unit == "1" else unit,
+        )
+        for name, unit, value, bar in zip(
+            study.observable_names,
+            study.observable_units,
+            limit.value.tolist(),
+            limit.relative_error.tolist(),
+            strict=True,
+        )
+    ]
+    return aligned([head, *body])
 
 
 def _check_lines(study: LevelStudy) -> list[str]:
-    held = study.held_out
-    if held is None:
-        return [row("check", "none: six rungs or more are needed to hold one out of the fit")]
-    figures = _held_out_figures(study)
+    from ..studies.level_checks import check_held_out
+
+    held, figures = study.held_out, check_held_out(study)
+    if held is None or figures is None:
+        none = "none: six rungs or more are needed to hold one out of the fit"
+        return [row("check", none), row("limit", _limit_text(study))]
     shorter = int(study.rungs.n_max[-len(held.n_max) - 1])
-    return [
+    lines = [
         row(
             "check",
             f"x_e of n_max = {n}, foreseen from rungs up to {shorter}: off by at most "
             f"{miss:.2f} of its error bar at every z"
             + ("" if miss <= 1.0 else ", OUTSIDE THE BAR")
-            + f"; the bar is at most {100.0 * bar:.0f} % of the correction (200 <= z <= 1600)",
+            + f"; the bar is at most {100.0 * bar:.0f} % of the correction",
         )
         for n, miss, bar in zip(
             held.n_max.tolist(),
-            figures["largest_miss_over_bar"].tolist(),
-            figures["largest_bar_over_correction"].tolist(),
+            figures.largest_miss_over_bar.tolist(),
+            figures.largest_bar_over_correction.tolist(),
             strict=True,
         )
         if math.isfinite(miss)
     ]
+    return [*lines, row("limit", _limit_text(study))]
+
+
+def _limit_text(study: LevelStudy) -> str:
+    """Say how well the limit of x_e is known."""
+    from ..studies.level_checks import LARGE, check_limit
+
+    found = check_limit(study)
+    place = f"{found.low:g} <= z <= {found.high:g}"
+    counts = f"{found.n_without_law} of {found.n_redshift} redshifts"
+    if math.isnan(found.bar_over_correction):
+        return f"no law is fitted at any of the {found.n_redshift} redshifts in {place}"
+    left_out = f"; {counts}, without a law, left out" if found.n_without_law else ""
+    text = (
+        f"its error bar is at most {100.0 * found.bar_over_correction:.0f} % of the correction "
+        f"from the longest rung to all levels (at z = {found.redshift:.0f}; {place}{left_out})"
+    )
+    if found.bar_over_correction > LARGE:
+        text += (
+            f": MORE THAN {100.0 * LARGE:.0f} %, so the limit is poorly known; take more rungs, in "
+            "steps of sqrt(2), or longer ones"
+        )
+    return text

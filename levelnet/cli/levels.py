@@ -18,7 +18,7 @@ from .solve import cache_pieces
 
 if TYPE_CHECKING:
     from ..history.setup import Setup
-    from ..studies.level_records import LevelStudy
+    from ..studies.level_records import LevelStudy, Question
     from ..studies.level_requirement import Demands
     from ..studies.requirement import Requirement
     from ..studies.verdict import Verdict
@@ -33,7 +33,7 @@ DESCRIPTION = (
 )
 EXAMPLE = "levelnet levels setup.toml --rungs 20,30,45,70,100,140,200 --plot figures"
 _LONG_S = 10.0  # above it the cost is announced before the work starts
-WITHIN, BETWEEN = 1e-3, (200.0, 1600.0)
+WITHIN = 1e-3
 
 
 def add_arguments(parser: argparse.ArgumentParser) -> None:
@@ -69,8 +69,8 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
         metavar=("LOW", "HIGH"),
         nargs=2,
         type=float,
-        default=BETWEEN,
-        help="redshifts between which it allows it (default: 200 1600)",
+        help="redshifts between which it allows it; the outputs of the setup must cover them "
+        "(default: as much of 200 to 1600 as they cover)",
     )
     parser.add_argument(
         "--requirement",
@@ -102,13 +102,12 @@ def run(options: argparse.Namespace, console: Console) -> int:
     resolve = () if options.resolve is None else whole_numbers("--resolve", options.resolve)
     target = options.output or Path(f"{options.setup.stem}-levels.h5")
     check_target(target, options.force, options.setup)
+    asked = () if requirement is None else tuple(requirement.to_toml().splitlines())
+    question = Question(options.within, *_between(setup, options), asked)
     ladder = _checked_ladder(setup, rungs, resolve, options)
     start = time.monotonic()
-    study = _study(setup, ladder, resolve, requirement, options, console)
+    study = _study(setup, ladder, resolve, requirement, question, options, console)
     seconds = time.monotonic() - start
-    asked = () if requirement is None else tuple(requirement.to_toml().splitlines())
-    low, high = options.between
-    question = Question(options.within, low, high, asked)
     study = dataclasses.replace(study, question=question)
     found, met = judged(study)
 
@@ -142,11 +141,24 @@ def _requirement(path: Path | None, setup: Setup) -> Requirement | None:
     return requirement
 
 
+def _between(setup: Setup, options: argparse.Namespace) -> tuple[float, float]:
+    """The range that the verdict is about, inside the outputs of the setup."""
+    from ..history.integrate import output_redshifts
+    from ..studies.level_checks import covered
+    from ..studies.rung import study_setup
+    from ..studies.verdict import outputs_between
+
+    outputs = output_redshifts(setup)
+    low, high = covered(outputs) if options.between is None else options.between
+    outputs_between(output_redshifts(study_setup(setup, (low, high))), options.within, low, high)
+    return low, high
+
+
 def whole_numbers(option: str, text: str) -> tuple[int, ...]:
     """Read whole numbers with commas between; InputError names the option and the part."""
     parts = text.replace(" ", "").split(",")
     for part in parts:
-        if not (part.isascii() and part.isdigit() and len(part) <= 6):
+        if not (part.isascii() and part.isdigit() and len(part) <= 18):
             raise InputError(
                 f'{option}: "{part}" is no whole number; write values such as 20,30,45'
             )
@@ -160,14 +172,17 @@ def _checked_ladder(
     options: argparse.Namespace,
 ) -> tuple[int, ...]:
     """The rungs to run; what anything later would refuse is refused here, before any work."""
-    from ..history.integrate import output_redshifts
     from ..report.levels import check_figures
+    from ..studies.convergence import FEWEST_RUNGS
     from ..studies.levels import check_ladder, default_rungs
-    from ..studies.verdict import outputs_between
 
     ladder = default_rungs(setup.hydrogen.n_max) if rungs is None else rungs
+    if rungs is None and len(ladder) < FEWEST_RUNGS:
+        raise InputError(
+            f"hydrogen.n_max = {setup.hydrogen.n_max}: too low for a ladder up to it; give one, "
+            "such as --rungs 20,30,45,70,100"
+        )
     check_ladder(setup, ladder, resolve)
-    outputs_between(output_redshifts(setup), options.within, *options.between)
     if options.plot is not None:
         check_folder(options.plot)
         check_figures(options.plot, len(ladder), bool(resolve), options.force)
@@ -179,6 +194,7 @@ def _study(
     ladder: tuple[int, ...],
     resolve: tuple[int, ...],
     requirement: Requirement | None,
+    question: Question,
     options: argparse.Namespace,
     console: Console,
 ) -> LevelStudy:
@@ -200,6 +216,7 @@ def _study(
             ladder,
             resolve=resolve,
             optical_depth_to=() if requirement is None else depths_asked(requirement),
+            also_at=(question.low, question.high),
             executor=executor,
             pieces=pieces,
             progress=progress,
@@ -208,15 +225,14 @@ def _study(
 
 def judged(study: LevelStudy) -> tuple[Verdict, Demands | None]:
     """Answer what the study was asked; if nothing was, the usual on as much as it covers."""
+    from ..studies.level_checks import covered
     from ..studies.level_requirement import demands
     from ..studies.requirement import parse_requirement
     from ..studies.verdict import verdict
 
     asked = study.question
     if asked is None:
-        low, high = float(study.redshift[-1]), float(study.redshift[0])
-        inside = max(BETWEEN[0], low), min(BETWEEN[1], high)
-        return verdict(study, WITHIN, *(inside if inside[0] < inside[1] else (low, high))), None
+        return verdict(study, WITHIN, *covered(study.redshift)), None
     found = verdict(study, asked.within, asked.low, asked.high)
     if not asked.requirement:
         return found, None

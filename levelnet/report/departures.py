@@ -40,9 +40,9 @@ def departure_map_figure(
     Returns
     -------
     matplotlib Figure
-        ln b (dimensionless) in colour, logarithmic in its size; a whole shell has one colour for
-        all its l. One sign: cividis, yellow is far
-        from equilibrium; both signs: a diverging map about 0.
+        ln b (dimensionless) in colour, logarithmic in its size. One sign: cividis, yellow is far
+        from equilibrium; both signs: a diverging map about 0. A whole shell has one colour for all
+        its l; a line marks where they begin.
 
     Raises
     ------
@@ -64,6 +64,8 @@ def departure_map_figure(
             cmap=colours,
             rasterized=n_max > _VECTOR_N_MAX,
         )
+        if np.any(levels.shell):
+            _mark_shells(axes, int(levels.n[levels.shell].min()), n_max)
         bar = figure.colorbar(mesh, ax=axes, label=r"$\ln b_{nl}$", pad=0.03)
         ticks = _round_values(float(norm.vmin or 0.0), float(norm.vmax or 0.0))
         bar.set_ticks(ticks, labels=[_number(value) for value in ticks], minor=False)
@@ -73,6 +75,23 @@ def departure_map_figure(
         _whole_numbers(axes)
         axes.set_title(_conditions(history, row, species), fontsize=7.5)
     return figure
+
+
+def _mark_shells(axes: Axes, lowest: int, n_max: int) -> None:
+    """A line between levels with an l of their own and whole shells, and what is beyond it."""
+    edge = lowest - 0.5
+    axes.axvline(edge, color=style.BLACK, linewidth=0.9, linestyle="--")
+    # In the empty corner above l = n - 1; on the side of the line that has room for it.
+    left = edge > 0.5 * (n_max + 1.5)
+    axes.annotate(
+        f"whole shells\n($n \\geq {lowest}$)" + (r" $\rightarrow$" if left else ""),
+        (edge, n_max - 1.0),
+        xytext=(-3.0 if left else 3.0, 0.0),
+        textcoords="offset points",
+        horizontalalignment="right" if left else "left",
+        verticalalignment="top",
+        fontsize=6.5,
+    )
 
 
 def departure_curves_figure(
@@ -92,7 +111,8 @@ def departure_curves_figure(
     Returns
     -------
     matplotlib Figure
-        The mean is ln of the mean of b over l with weights 2l + 1.
+        The mean is ln of the mean of b over l with weights 2l + 1. Curves of one l end where
+        levels have an l of their own; whole shells above, which have one b, are a series of theirs.
 
     Raises
     ------
@@ -143,11 +163,12 @@ def _panel_rows(history: History, redshifts: tuple[float, ...] | None) -> list[i
 def _draw_curves(axes: Axes, levels: LevelSet, log_departure: FloatArray) -> None:
     n_max = int(levels.n[-1])
     marker = "o" if n_max <= 12 else None
+    resolved = ~levels.shell
     n, mean = mean_over_l(levels, log_departure)
-    axes.plot(n[n > 1], mean[n > 1], color=style.AMBER, lw=3.0, alpha=0.8, label="mean over $l$")
+    shown = (n > 1) & np.isin(n, levels.n[resolved])
+    axes.plot(n[shown], mean[shown], color=style.AMBER, lw=3.0, alpha=0.8, label="mean over $l$")
     for l in range(min(3, int(levels.l.max()) + 1)):
-        # In a whole shell every l has the same b.
-        chosen = ((levels.l == l) | levels.shell) & (levels.n > 1)
+        chosen = (levels.l == l) & (levels.n > 1)
         axes.plot(
             levels.n[chosen],
             log_departure[chosen],
@@ -157,6 +178,13 @@ def _draw_curves(axes: Axes, levels: LevelSet, log_departure: FloatArray) -> Non
             markersize=2.5,
             label=f"$n${_LETTERS[l]}",
         )
+    if not np.all(resolved):
+        shell = levels.shell
+        axes.plot(
+            levels.n[shell], log_departure[shell], color=style.PURPLE, linestyle=(0, (1, 1)),
+            linewidth=1.8, marker=marker if np.sum(shell) > 1 else "o", markersize=2.5,
+            label="whole shells",
+        )  # fmt: skip
     axes.axhline(0.0, color=style.GREY, linewidth=0.5, zorder=0)
     axes.set_xscale("log")
     axes.set_xlim(2.0, max(n_max, 3))

@@ -1,18 +1,20 @@
-"""The figures of a study of truncations: convergence, the check of its law, the role of l."""
+"""The figures of a study of truncations, and their files."""
 
 from __future__ import annotations
 
 from collections.abc import Callable
 from pathlib import Path
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING
 
 import numpy as np
 
-from ..arrays import FloatArray
+from ..arrays import FloatArray, IntArray
+from ..studies.convergence import truncation_error
 from ..studies.level_records import LevelStudy
-from ..studies.levels import carry_all, n_held_out
+from ..studies.levels import carry_all, logarithm, n_held_out
 from . import style
 from .figures import check_place, save_drawn
+from .level_checks import SMALLEST, check_figure, draw_rungs, resolve_figure
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
@@ -23,7 +25,7 @@ _BEYOND = 4.0  # the law is drawn up to so many times the longest rung
 _POINTS = 25
 _LONGEST = 3  # rungs shown where the limit is shown from near
 _SLOW = 850.0  # redshift below which truncation errors are large
-_SMALLEST = 1e-10  # errors below are numerical noise
+_LOWEST_EDGE = 1e-2  # of a band in a logarithmic panel, over its curve
 
 
 def save_level_figures(
@@ -101,8 +103,9 @@ def level_figure(study: LevelStudy) -> Figure:
     -------
     matplotlib Figure
         x_e(n_max)/x_e(all levels) - 1, dimensionless. (a): at a few redshifts, rungs as dots, the
-        law beyond the longest dashed. (b): towards all levels, in per cent, with the band of the
-        error bar. (c): of each rung over redshift; shaded: the error bar of the limit.
+        law beyond the longest dashed, with the band of its error bar. (b): towards all levels, in
+        per cent, with the band of the error bar. (c): of each rung over redshift; shaded: the
+        error bar of the limit.
     """
     with style.house_style():
         figure = style.new_figure(style.TWO_COLUMNS_IN, 2.9)
@@ -137,17 +140,28 @@ def _beyond(study: LevelStudy, places: FloatArray) -> tuple[FloatArray, FloatArr
     return curve, bar
 
 
+def _truncation(study: LevelStudy, places: IntArray) -> tuple[FloatArray, FloatArray]:
+    """Error of x_e cut at each of `places`, and its bar: as the verdict has them."""
+    noise, logs = study.noise.free_electron_fraction, logarithm(study.rungs.free_electron_fraction)
+    found = [truncation_error(study.rungs.n_max, logs, noise, n) for n in places.tolist()]
+    return np.expm1([error for error, _ in found]), np.array([bar for _, bar in found])
+
+
 def _draw_by_level(axes: Axes, study: LevelStudy) -> None:
     limit, rungs = study.limit.free_electron_fraction, study.rungs
     errors = rungs.free_electron_fraction / limit.value - 1.0
     longest = float(rungs.n_max[-1])
-    beyond = np.geomspace(longest, _BEYOND * longest, _POINTS)
-    curve, _ = _beyond(study, beyond)
+    beyond = np.unique(np.geomspace(longest, _BEYOND * longest, _POINTS).astype(int))
+    curve, bar = _truncation(study, beyond)
     for j, k in enumerate(_shown_rows(study)):
-        colour = style.SERIES[j % len(style.SERIES)]
+        colour = style.SERIES[j]
         label = f"$z$ = {study.redshift[k]:.0f}"
         axes.plot(rungs.n_max, errors[:, k], "o-", color=colour, ms=3.0, label=label)
         axes.plot(beyond, curve[:, k], "--", color=colour, linewidth=1.0)
+        # On a logarithmic axis a band that reaches zero would have no end.
+        low = np.maximum(curve[:, k] - bar[:, k], _LOWEST_EDGE * np.abs(curve[:, k]))
+        high = curve[:, k] + bar[:, k]
+        axes.fill_between(beyond, low, high, color=colour, alpha=0.3, linewidth=0.0)
     axes.set_xscale("log")
     axes.set_yscale("log")
     _plain_ticks(axes, float(rungs.n_max[0]), _BEYOND * longest)
@@ -180,7 +194,9 @@ def _draw_limit(axes: Axes, study: LevelStudy) -> None:
         low, high = (100.0 * (curve[:, k] + sign * bar[:, k]) for sign in (-1.0, 1.0))
         axes.fill_between(inverse, low, high, color=colour, alpha=0.35, linewidth=0.0)
     axes.axhline(0.0, color=style.GREY, linewidth=0.6, zorder=0)
-    axes.set_xlim(0.0, 1.08 / float(rungs.n_max[-_LONGEST:][0]))
+    # Room before infinity, so that its tick and the bands do not end in the corner.
+    right = 1.08 / float(rungs.n_max[-_LONGEST:][0])
+    axes.set_xlim(-0.06 * right, right)
     ticks = [*rungs.n_max[-_LONGEST:].tolist(), 3 * int(rungs.n_max[-1])]
     axes.set_xticks([0.0, *(1.0 / n for n in ticks)], [r"$\infty$", *(str(n) for n in ticks)])
     axes.set_xlabel(r"$n_\mathrm{max}$, drawn as $1/n_\mathrm{max}$")
@@ -201,10 +217,12 @@ def _plain_ticks(axes: Axes, low: float, high: float) -> None:
 def _draw_by_redshift(axes: Axes, study: LevelStudy) -> None:
     limit, rungs = study.limit.free_electron_fraction, study.rungs
     errors = np.abs(rungs.free_electron_fraction / limit.value - 1.0)
-    _draw_ladder(axes, study.redshift, errors, [rf"{n}" for n in rungs.n_max.tolist()])
+    shown = np.where(errors > SMALLEST, errors, np.nan)
+    draw_rungs(axes, study.redshift, shown, [rf"{n}" for n in rungs.n_max.tolist()])
+    axes.set_ylim(SMALLEST, max(3.0 * float(np.max(errors)), 10.0 * SMALLEST))
     axes.fill_between(
         study.redshift,
-        _SMALLEST / 10.0,
+        SMALLEST / 10.0,
         limit.relative_error,
         color=style.GREY,
         alpha=0.35,
@@ -216,88 +234,3 @@ def _draw_by_redshift(axes: Axes, study: LevelStudy) -> None:
         loc="lower left", fontsize=6.0, title=r"$n_\mathrm{max}$", title_fontsize=6.5,
         labelspacing=0.2, handlelength=2.2,
     )  # fmt: skip
-
-
-def _draw_ladder(axes: Axes, redshift: FloatArray, errors: FloatArray, labels: list[str]) -> None:
-    """One curve a rung, from light to dark."""
-    from matplotlib import colormaps
-
-    shades = colormaps["cividis"](np.linspace(0.88, 0.0, len(labels)))
-    for k, label in enumerate(labels):
-        shown = np.where(errors[k] > _SMALLEST, errors[k], np.nan)
-        dash: Any = style.DASHES[k % len(style.DASHES)]
-        axes.plot(redshift, shown, color=shades[k], linestyle=dash, linewidth=1.2, label=label)
-    axes.set_xlim(float(redshift[-1]), float(redshift[0]))
-    top = float(np.nanmax(errors))
-    axes.set_ylim(_SMALLEST, max(3.0 * top, 10.0 * _SMALLEST))
-    axes.set_xlabel(r"redshift $z$")
-
-
-def check_figure(study: LevelStudy) -> Figure:
-    """What the shorter rungs foresee of the longest, and the exponent of the approach.
-
-    Parameters
-    ----------
-    study : LevelStudy
-        A study with rungs held out.
-
-    Returns
-    -------
-    matplotlib Figure
-        Left: foreseen over actual x_e of each rung held out, less 1, over its error bar. Right:
-        exponent p of C (n_max + 1/2)^-p through the three longest rungs. Both dimensionless.
-    """
-    held = study.held_out
-    assert held is not None
-    with style.house_style():
-        figure = style.new_figure(style.TWO_COLUMNS_IN, 2.9)
-        left, right = figure.subplots(1, 2)
-        seen = held.foreseen.free_electron_fraction
-        actual = study.rungs.free_electron_fraction[-len(held.n_max) :]
-        misses = np.log(seen.value / actual) / seen.relative_error
-        for k, (n, miss) in enumerate(zip(held.n_max.tolist(), misses, strict=True)):
-            label = rf"$n_\mathrm{{max}}$ = {n}, held out"
-            left.plot(
-                study.redshift, miss, linestyle=style.DASHES[k], color=style.SERIES[k], label=label
-            )
-        left.axhspan(-1.0, 1.0, color=style.GREY, alpha=0.2, linewidth=0.0, label="error bar")
-        size = max(2.0, 1.1 * float(np.max(np.abs(misses))))
-        left.set_ylim(-size, size)
-        left.set_ylabel(r"(foreseen $-$ actual) $\ln x_e$ / error bar")
-        left.legend(loc="lower right", fontsize=6.5, labelspacing=0.25)
-        exponent = study.limit.free_electron_fraction.exponent
-        right.plot(study.redshift, exponent, color=style.BLUE)
-        right.set_ylabel(r"exponent $p$ of $n_\mathrm{max}^{-p}$")
-        for axes, letter in ((left, "a"), (right, "b")):
-            axes.set_xlim(float(study.redshift[-1]), float(study.redshift[0]))
-            axes.set_xlabel(r"redshift $z$")
-            style.panel_letter(axes, letter)
-    return figure
-
-
-def resolve_figure(study: LevelStudy) -> Figure:
-    """What statistical populations inside the higher shells do to x_e.
-
-    Parameters
-    ----------
-    study : LevelStudy
-        A study with rungs of resolve_l_to.
-
-    Returns
-    -------
-    matplotlib Figure
-        |x_e(l resolved up to n)/x_e(every l resolved) - 1| over redshift, at the longest n_max.
-    """
-    resolved = study.resolved
-    assert resolved is not None
-    with style.house_style():
-        figure = style.new_figure(style.ONE_COLUMN_IN, 3.0)
-        axes = figure.subplots()
-        whole = study.rungs.free_electron_fraction[-1]
-        errors = np.abs(resolved.free_electron_fraction / whole - 1.0)
-        labels = [rf"$n \leq {top}$" for top in resolved.resolve_l_to.tolist()]
-        _draw_ladder(axes, study.redshift, errors, labels)
-        axes.set_yscale("log")
-        axes.set_ylabel(r"$|\,\Delta x_e / x_e\,|$ from whole shells")
-        axes.legend(loc="upper right", fontsize=6.5, title=r"$l$ resolved", title_fontsize=6.5)
-    return figure

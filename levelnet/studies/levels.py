@@ -12,13 +12,13 @@ import numpy as np
 
 from ..arrays import FloatArray
 from ..errors import InputError, Outcome, SolveError
-from ..history.cost import check_memory, estimate
+from ..history.cost import HIGHEST_N, check_memory, estimate
 from ..history.integrate import output_redshifts
 from ..history.setup import Setup
 from ..pieces import Pieces
 from .convergence import FEWEST_RUNGS, carry, check_rung_count
 from .level_records import Estimate, Estimates, HeldOut, LevelStudy, Noise, Rungs
-from .rung import LOW_N, RungResult, compute_rung, rung_setup
+from .rung import LOW_N, RungResult, compute_rung, rung_setup, study_setup
 
 Progress = Callable[[str, float], None]
 Task = Callable[[Setup], RungResult]
@@ -42,6 +42,7 @@ def level_study(
     *,
     resolve: Iterable[int] = (),
     optical_depth_to: Iterable[float] = (),
+    also_at: Iterable[float] = (),
     executor: Executor | None = None,
     pieces: Pieces | None = None,
     progress: Progress | None = None,
@@ -52,7 +53,8 @@ def level_study(
     ----------
     setup : Setup
         What to compute; its n_max counts only where no rungs are given, and its accuracy only if
-        it is better than 1e-8.
+        it is better than 1e-8. The study has a grid of its own: the output redshifts of the setup,
+        and as many between that no step in ln(1 + z) exceeds 0.03.
     rungs : iterable of int, optional
         n_max of each rung, ascending, at least 4 of them, each at least 4. The default is seven in
         steps of sqrt(2) up to the n_max of the setup.
@@ -60,6 +62,9 @@ def level_study(
         Values of resolve_l_to to try at the longest n_max, ascending.
     optical_depth_to : iterable of float, optional (dimensionless)
         Redshifts Z for which optical_depth(Z) is among the observables.
+    also_at : iterable of float, optional (dimensionless)
+        Redshifts that the grid is to hold too, such as the ends of the range of a verdict; those
+        outside the outputs of the setup are left out.
     executor : concurrent.futures.Executor, optional
         Runs the rungs, the longest first; None: this process does. The bits are the same.
     pieces : Pieces, optional
@@ -75,8 +80,8 @@ def level_study(
     Raises
     ------
     InputError
-        For rungs that make no ladder, for lines that change from rung to rung, or if the longest
-        rungs do not fit in memory.
+        For rungs that make no ladder, for a setup with whole shells or with lines that change from
+        rung to rung, or if the longest rungs do not fit in memory.
     SolveError
         If a rung fails.
 
@@ -94,6 +99,7 @@ def level_study(
     ladder = default_rungs(setup.hydrogen.n_max) if rungs is None else tuple(rungs)
     shells = tuple(resolve)
     check_ladder(setup, ladder, shells)
+    setup = study_setup(setup, also_at)
     relative = min(setup.accuracy.relative, _RELATIVE)
     jobs = [rung_setup(setup, n, None, relative) for n in ladder]
     jobs += [rung_setup(setup, ladder[-1], top, relative) for top in shells]
@@ -118,6 +124,12 @@ def default_rungs(n_max: int) -> tuple[int, ...]:
 
 def check_ladder(setup: Setup, rungs: Sequence[int], resolve: Sequence[int] = ()) -> None:
     """Raise InputError for a ladder that tells nothing, in one line."""
+    top = setup.hydrogen.highest_resolved
+    if top != setup.hydrogen.n_max:
+        raise InputError(
+            f"hydrogen.resolve_l_to = {top}: the study sets it itself; leave it out of the setup, "
+            f"and give whole shells that are to be tried as resolve (--resolve {top})"
+        )
     lines = setup.lines.lyman_lines
     if isinstance(lines, str):
         raise InputError(
@@ -130,8 +142,12 @@ def check_ladder(setup: Setup, rungs: Sequence[int], resolve: Sequence[int] = ()
         if any(a >= b for a, b in itertools.pairwise(values)):
             raise InputError(f"{name} = {text}: each must be larger than the one before")
         if values and values[0] < lowest:
-            reason = "" if lowest == LOW_N else f" ({lines} Lyman lines are open)"
-            raise InputError(f"{name} = {text}: the lowest allowed is {lowest}{reason}")
+            reason = f"populations of every (n, l) to n = {LOW_N} are recorded"
+            if lowest > LOW_N:
+                reason = f"{lines} Lyman lines are open"
+            raise InputError(f"{name} = {text}: the lowest allowed is {lowest} ({reason})")
+        if values and values[-1] > HIGHEST_N:
+            raise InputError(f"{name} = {text}: allowed are {lowest} to {HIGHEST_N}")
     check_rung_count(len(rungs))
     if resolve and resolve[-1] >= rungs[-1]:
         raise InputError(

@@ -34,6 +34,11 @@ MAX_OBSERVABLES, MAX_ROWS = 100, 5000
 _MAX_BYTES = 16_000_000
 # Largest asymmetry of a covariance, over the geometric mean of the variances: rounding in text.
 _SYMMETRIC = 1e-9
+# Between these sizes no square of kernel over spread leaves the range of floating-point numbers.
+_LARGEST_KERNEL = 1e50
+_SMALLEST_VARIANCE, _LARGEST_VARIANCE = 1e-100, 1e100
+# Smallest eigenvalue of a correlation matrix: below, sigma would hang on the rounding of the text.
+_SMALLEST_EIGENVALUE = 1e-10
 _NODES, _WEIGHTS = np.polynomial.legendre.leggauss(3)
 
 
@@ -61,9 +66,10 @@ class Response:
     redshift : tuple of float, length n_redshift, 2 to 5000 (dimensionless)
         Strictly ascending, from 0 or above to 10000 or below.
     kernels : tuple of tuple of float, shape (n_redshift, n_observables), units of each observable
-        dO_i/d ln x_e(z) per unit of ln(1 + z).
+        dO_i/d ln x_e(z) per unit of ln(1 + z), -1e50 to 1e50.
     covariance : tuple of tuple of float, shape (n_observables, n_observables), products of units
-        Of the observables; symmetric and positive definite.
+        Of the observables; symmetric and positive definite, variances 1e-100 to 1e100, no
+        eigenvalue of the correlation matrix below 1e-10.
 
     Raises
     ------
@@ -82,6 +88,7 @@ class Response:
         _check_redshift(self.redshift)
         _check_shape("kernels", self.kernels, len(self.redshift), len(self.names))
         _check_shape("covariance", self.covariance, len(self.names), len(self.names))
+        _check_kernels(np.array(self.kernels))
         _check_covariance(np.array(self.covariance))
 
     def change(self, redshift: FloatArray, delta_ln_x_e: FloatArray) -> FloatArray:
@@ -154,21 +161,40 @@ def _check_shape(what: str, matrix: tuple[Row, ...], rows: int, columns: int) ->
             raise ValueError(f"{what}, row {number}: {len(row)} numbers, {columns} are needed")
 
 
+def _check_kernels(kernels: FloatArray) -> None:
+    if np.any(np.abs(kernels) > _LARGEST_KERNEL):
+        i, j = np.argwhere(np.abs(kernels) > _LARGEST_KERNEL)[0]
+        raise ValueError(
+            f"kernel {kernels[i, j]:g} in row {i + 1}, column {j + 1}: allowed are "
+            f"-{_LARGEST_KERNEL:g} to {_LARGEST_KERNEL:g}"
+        )
+
+
 def _check_covariance(covariance: FloatArray) -> None:
     variances = np.diag(covariance)
     if not np.all(variances > 0.0):
         at = int(np.argmin(variances > 0.0))
         raise ValueError(f"variance {variances[at]:g} in row {at + 1} must be positive")
+    wild = (variances < _SMALLEST_VARIANCE) | (variances > _LARGEST_VARIANCE)
+    if np.any(wild):
+        at = int(np.argmax(wild))
+        raise ValueError(
+            f"variance {variances[at]:g} in row {at + 1}: allowed are {_SMALLEST_VARIANCE:g} to "
+            f"{_LARGEST_VARIANCE:g}; choose another unit"
+        )
     spread = np.sqrt(variances)
     uneven = np.abs(covariance - covariance.T) > _SYMMETRIC * np.outer(spread, spread)
     if np.any(uneven):
         i, j = np.argwhere(uneven)[0] + 1
         raise ValueError(f"covariance is not symmetric in row {i}, column {j}")
-    try:
-        # Over the variances, so that units do not matter.
-        np.linalg.cholesky(covariance / np.outer(spread, spread))
-    except np.linalg.LinAlgError:
-        raise ValueError("covariance is not positive definite") from None
+    # Of the correlations, so that units do not matter.
+    smallest = float(np.linalg.eigvalsh(covariance / np.outer(spread, spread))[0])
+    if not smallest >= _SMALLEST_EIGENVALUE:
+        raise ValueError(
+            f"covariance is not positive definite, or too close to singular: the smallest "
+            f"eigenvalue of its correlation matrix is {smallest:.2g}, at least "
+            f"{_SMALLEST_EIGENVALUE:g} is needed"
+        )
 
 
 def read_response(path: str | Path, sha256: str | None = None) -> Response:

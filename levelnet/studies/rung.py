@@ -13,6 +13,7 @@ from __future__ import annotations
 
 import dataclasses
 import math
+from collections.abc import Iterable
 from typing import NamedTuple
 
 import numpy as np
@@ -22,7 +23,7 @@ from ..background.last_scattering import Observed, ionized_redshift, observe
 from ..background.quadrature import quadrature
 from ..errors import Outcome, SolveError
 from ..history.equations import ionized_and_neutral
-from ..history.integrate import Integrated, integrate_history
+from ..history.integrate import Integrated, integrate_history, output_redshifts
 from ..history.outcome import outcome_of, relaxation_hubble
 from ..history.outputs import electron_fraction_at, solve_levels, state_at
 from ..history.setup import Setup
@@ -32,6 +33,10 @@ from ..pieces import Pieces
 
 LOW_N = 4
 """Levels up to this n have their populations recorded."""
+
+# Largest step of the grid of a study in ln(1 + z). Errors over a range are read at the redshifts
+# of the grid and by splines between: at this step neither depends on what the setup delivers.
+_STEP = 0.03
 
 
 class RungResult(NamedTuple):
@@ -60,14 +65,39 @@ class RungResult(NamedTuple):
     outcome: Outcome
 
 
+def study_setup(setup: Setup, also: Iterable[float] = ()) -> Setup:
+    """The setup on the grid of a study.
+
+    Parameters
+    ----------
+    setup : Setup
+        Any; one that is dense enough comes back as it is.
+    also : iterable of float, dimensionless
+        Redshifts that the grid is to hold too; those outside the outputs are left out.
+
+    Returns
+    -------
+    Setup
+        Its grid holds the output redshifts, what else is asked, and as many between, evenly spaced
+        in ln(1 + z), that no step in it exceeds 0.03.
+    """
+    outputs = output_redshifts(setup)
+    inside = {float(z) for z in also if outputs[-1] <= z <= outputs[0]}
+    places = np.array(sorted({*outputs.tolist(), *inside}, reverse=True))
+    x = np.log1p(places)
+    counts = np.ceil(-np.diff(x) / _STEP - 1e-9).astype(int)
+    if len(places) == len(outputs) and np.all(counts <= 1):
+        return setup
+    more = [np.linspace(x[k], x[k + 1], n + 1)[1:-1] for k, n in enumerate(counts.tolist())]
+    grid = tuple(sorted({*places.tolist(), *np.expm1(np.concatenate(more)).tolist()}, reverse=True))
+    return dataclasses.replace(setup, grid=dataclasses.replace(setup.grid, redshifts=grid))
+
+
 def rung_setup(setup: Setup, n_max: int, resolve_l_to: int | None, relative: float) -> Setup:
-    """The setup of one rung; `resolve_l_to` of None leaves the setup's own choice."""
-    hydrogen = setup.hydrogen
-    top = hydrogen.resolve_l_to if resolve_l_to is None else resolve_l_to
-    top = None if top is None else min(n_max, top)
+    """The setup of one rung; where `resolve_l_to` is None every level is resolved in l."""
     return dataclasses.replace(
         setup,
-        hydrogen=dataclasses.replace(hydrogen, n_max=n_max, resolve_l_to=top),
+        hydrogen=dataclasses.replace(setup.hydrogen, n_max=n_max, resolve_l_to=resolve_l_to),
         accuracy=dataclasses.replace(setup.accuracy, relative=relative),
     )
 

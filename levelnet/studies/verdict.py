@@ -62,7 +62,7 @@ def verdict(study: LevelStudy, within: float, low: float, high: float) -> Verdic
     Raises
     ------
     InputError
-        If `within` is out of range or no output lies in the range of redshift.
+        If `within` is out of range, or the outputs do not cover the range of redshift.
     """
     inside = outputs_between(study.redshift, within, low, high)
     rungs = study.rungs
@@ -97,32 +97,20 @@ def population_changes(study: LevelStudy) -> FloatArray:
     return np.asarray(changes.max(axis=(1, 2)))
 
 
-def shell_changes(study: LevelStudy, low: float, high: float) -> FloatArray:
-    """Largest relative change of x_e, with its sign, by the whole shells of each resolved rung.
-
-    Between two redshifts (dimensionless), against the longest rung with every level of its own.
-    """
-    if study.resolved is None:
-        return np.empty(0)
-    inside = outputs_between(study.redshift, 1.0, low, high)
-    whole = study.rungs.free_electron_fraction[-1, inside]
-    changes = study.resolved.free_electron_fraction[:, inside] / whole - 1.0
-    worst = np.argmax(np.abs(changes), axis=1)
-    return np.asarray(changes[np.arange(len(worst)), worst])
-
-
 def outputs_between(redshift: FloatArray, within: float, low: float, high: float) -> IntArray:
     """Which outputs lie between two redshifts; InputError where the question makes no sense."""
     if not _LEAST < within <= 1.0:
         raise InputError(f"within = {within:g}: allowed are values above {_LEAST:g} up to 1")
     if not low <= high:
         raise InputError(f"between = {low:g}, {high:g}: the lower redshift comes first")
+    if not redshift[-1] <= low <= high <= redshift[0]:
+        raise InputError(
+            f"between = {low:g}, {high:g}: the outputs of the setup do not cover that; they run "
+            f"from {redshift[-1]:g} to {redshift[0]:g}"
+        )
     inside = np.flatnonzero((redshift >= low) & (redshift <= high))
     if not len(inside):
-        raise InputError(
-            f"between = {low:g}, {high:g}: no output redshift of the setup lies there "
-            f"(they run from {redshift[-1]:g} to {redshift[0]:g})"
-        )
+        raise InputError(f"between = {low:g}, {high:g}: no redshift of the study lies there")
     return inside
 
 

@@ -28,7 +28,7 @@ from levelnet.background import (
     with_expansion,
     write_expansion_table,
 )
-from levelnet.errors import AccuracyWarning, FileFormatError, InputError, RangeError
+from levelnet.errors import AccuracyWarning, InputError, RangeError
 from levelnet.history.setup import Setup, parse_setup
 from tests.tolerances import ORDER, ROUND_OFF
 
@@ -207,7 +207,7 @@ def test_unreadable_files_are_one_line(tmp_path: Path, monkeypatch: pytest.Monke
     path = tmp_path / "rates.csv"
     write_expansion_table(ExpansionTable(*rows()), path)
     monkeypatch.setattr(expansion, "_MAX_BYTES", 1000)
-    with pytest.raises(FileFormatError, match="no expansion table"):
+    with pytest.raises(InputError, match=r"rates\.csv: over 1 kB"):
         read_expansion_table(path)
 
 

@@ -4,17 +4,14 @@ from __future__ import annotations
 
 import dataclasses
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 import pytest
 
 from levelnet.errors import InputError
-from levelnet.report.levels import (
-    check_figure,
-    level_figure,
-    resolve_figure,
-    save_level_figures,
-)
+from levelnet.report.level_checks import check_figure, resolve_figure
+from levelnet.report.levels import level_figure, save_level_figures
 from levelnet.studies.level_records import Estimate, LevelStudy
 from tests.small_levels import RUNGS, small_study
 
@@ -48,6 +45,34 @@ def test_dots_are_the_errors_of_the_rungs() -> None:
     assert near.lines[1].get_ydata()[-1] == pytest.approx(0.0, abs=1e-12)
 
 
+def test_one_redshift_has_one_colour() -> None:
+    by_level, near, _ = level_figure(small_study()).axes
+
+    def colours(axes: Any) -> dict[str, str]:
+        named = [one for one in axes.lines if one.get_label().startswith("$z$")]
+        return {one.get_label(): one.get_color() for one in named}
+
+    first, second = colours(by_level), colours(near)
+    assert second
+    assert {name: first[name] for name in second} == second
+
+
+def test_band_beyond_the_rungs_is_that_of_the_verdict() -> None:
+    study = small_study()
+    by_level = level_figure(study).axes[0]
+    row = int(np.argmin(np.abs(study.redshift - 1100.0)))
+    place = [one.get_label() for one in by_level.lines][::2].index(
+        f"$z$ = {study.redshift[row]:.0f}"
+    )
+    edges = by_level.collections[place].get_paths()[0].vertices
+    # At the longest rung: its error, and the bar of the limit around it.
+    limit = study.limit.free_electron_fraction
+    error = study.rungs.free_electron_fraction[-1, row] / limit.value[row] - 1.0
+    at_longest = edges[edges[:, 0] == RUNGS[-1], 1]
+    assert at_longest.max() == pytest.approx(error + limit.relative_error[row], rel=1e-9)
+    assert at_longest.min() == pytest.approx(error - limit.relative_error[row], rel=1e-9)
+
+
 def test_misses_are_in_units_of_the_bar() -> None:
     study = small_study()
     left, right = check_figure(study).axes
@@ -62,9 +87,11 @@ def test_resolved_rungs_are_held_against_the_longest() -> None:
     drawn = axes.lines[0].get_ydata()
     assert study.resolved is not None
     first = study.resolved.free_electron_fraction[0]
-    expected = np.abs(first / study.rungs.free_electron_fraction[-1] - 1.0)
-    seen = np.isfinite(drawn)
-    assert drawn[seen] == pytest.approx(expected[seen])
+    # With its sign: these rungs, shorter ones by another name, have more electrons.
+    expected = first / study.rungs.free_electron_fraction[-1] - 1.0
+    assert drawn == pytest.approx(expected)
+    low, high = axes.get_ylim()
+    assert low < 0.0 < drawn.max() < high
 
 
 def test_study_without_any_law_is_drawn() -> None:

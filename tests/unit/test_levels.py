@@ -12,9 +12,17 @@ import pytest
 
 from levelnet.distilled.nodes import process_pool
 from levelnet.errors import InputError, Outcome, SolveError
+from levelnet.history.integrate import output_redshifts
 from levelnet.history.run import solve
 from levelnet.history.setup import Accuracy, Setup
 from levelnet.pieces import MemoryPieces
+from levelnet.studies.level_checks import (
+    check_held_out,
+    check_limit,
+    enough_resolved,
+    resolved_text,
+    shell_changes,
+)
 from levelnet.studies.level_requirement import (
     check_covered,
     demands,
@@ -28,14 +36,8 @@ from levelnet.studies.levels import (
     n_held_out,
 )
 from levelnet.studies.requirement import Requirement, parse_requirement
-from levelnet.studies.rung import rung_setup
-from levelnet.studies.verdict import (
-    population_changes,
-    rung_errors,
-    shell_changes,
-    verdict,
-    verdict_text,
-)
+from levelnet.studies.rung import rung_setup, study_setup
+from levelnet.studies.verdict import population_changes, rung_errors, verdict, verdict_text
 from tests.small_levels import RUNGS, level_setup, small_study
 from tests.small_runs import small_setup
 from tests.unit.test_store_table import assert_same
@@ -46,7 +48,7 @@ def test_rungs_are_histories_of_their_own() -> None:
     study = small_study()
     assert study.rungs.n_max.tolist() == list(RUNGS)
     rung = 3
-    setup = rung_setup(level_setup(), RUNGS[rung], None, 1e-8)
+    setup = rung_setup(study_setup(level_setup()), RUNGS[rung], None, 1e-8)
     history = solve(setup)
     assert np.array_equal(study.redshift, history.redshift)
     same = study.rungs.free_electron_fraction[rung]
@@ -140,9 +142,10 @@ def test_default_ladder(n_max: int, expected: tuple[int, ...]) -> None:
         ((20, 30, 40), (), "a ladder with 3 rungs allows"),
         ((20, 30, 30, 40), (), "rungs = 20, 30, 30, 40: each must be larger than the one before"),
         ((30, 20, 40, 50), (), "each must be larger"),
-        ((3, 4, 5, 6), (), "the lowest allowed is 4"),
+        ((3, 4, 5, 6), (), r"the lowest allowed is 4 \(populations of every \(n, l\) to n = 4"),
+        ((4, 5, 6, 999_999), (), "rungs = 4, 5, 6, 999999: allowed are 4 to 1000"),
         ((4, 5, 6, 8), (8,), "resolve = 8: must be below the longest rung, n_max = 8"),
-        ((4, 5, 6, 8), (3,), "resolve = 3: the lowest allowed is 4"),
+        ((4, 5, 6, 8), (3,), r"resolve = 3: the lowest allowed is 4 \(populations"),
         ((4, 5, 6, 8), (6, 5), "resolve = 6, 5: each must be larger"),
     ],
 )
@@ -164,9 +167,17 @@ def test_lines_must_not_change_from_rung_to_rung() -> None:
     check_ladder(setup({"lyman_lines": 9}), (10, 12, 14, 16))
 
 
-def test_too_large_for_memory_is_said_before_work() -> None:
-    with pytest.raises(InputError, match="memory needed"):
-        level_study(level_setup(), (4, 6, 8, 90_000))
+def test_whole_shells_of_the_setup_are_refused() -> None:
+    setup = small_setup(20, hydrogen={"resolve_l_to": 12})
+    with pytest.raises(InputError, match=r"resolve_l_to = 12: the study sets it itself; leave it"):
+        level_study(setup, (4, 5, 6, 8))
+    check_ladder(small_setup(20, hydrogen={"resolve_l_to": 20}), (20, 30, 40, 50))
+
+
+def test_too_large_for_memory_is_said_before_work(monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setattr("levelnet.history.cost.available_memory_bytes", lambda: 2e9)
+    with pytest.raises(InputError, match=r"n_max = 1000: about .* of memory needed"):
+        level_study(level_setup(), (4, 6, 8, 1000))
 
 
 def test_step_limit_is_a_failure_of_the_rung() -> None:
@@ -210,7 +221,11 @@ def test_verdict_is_about_the_worst_redshift() -> None:
         (2.0, 200.0, 1600.0, "within = 2: allowed"),
         (float("nan"), 200.0, 1600.0, "within = nan"),
         (1e-3, 1600.0, 200.0, "the lower redshift comes first"),
-        (1e-3, 20.0, 30.0, "no output redshift of the setup lies there"),
+        (1e-3, 20.0, 30.0, "do not cover that; they run from 200 to 1800"),
+        (1e-3, 100.0, 1600.0, "between = 100, 1600: the outputs of the setup do not cover that"),
+        (1e-3, 200.0, 1800.5, "do not cover that"),
+        (1e-3, 900.0, float("nan"), "the lower redshift comes first"),
+        (1e-3, 900.0, 900.001, "no redshift of the study lies there"),
     ],
 )
 def test_verdicts_that_make_no_sense(within: float, low: float, high: float, message: str) -> None:
@@ -227,10 +242,17 @@ def test_whole_shells_have_rungs_of_their_own() -> None:
     assert resolved is not None
     assert resolved.n_max.tolist() == [11, 11]
     assert resolved.resolve_l_to.tolist() == [5, 8]
-    history = solve(rung_setup(level_setup(6), 11, 5, 1e-8))
+    history = solve(rung_setup(study_setup(level_setup(6)), 11, 5, 1e-8))
     seen = resolved.free_electron_fraction[0]
     assert seen == pytest.approx(history.free_electron_fraction, rel=1e-12)
     few, many = shell_changes(study, 200.0, 1600.0)
+    for within, top, words in (
+        (1.01 * abs(few), 5, r"l resolved to n = 5 (of 5, 8 tried, at n_max = 11) is enough"),
+        (1.01 * abs(many), 8, "l resolved to n = 8 (of 5, 8 tried, at n_max = 11) is enough"),
+        (0.99 * abs(many), None, "none of those tried is enough (l resolved to n = 5, 8, at n_max"),
+    ):
+        assert enough_resolved(study, within, 200.0, 1600.0) == top
+        assert words in resolved_text(study, within, 200.0, 1600.0)
     assert few < many < 0.0
     assert shell_changes(study, 1000.0, 1600.0)[0] > few
     assert shell_changes(small_study(), 200.0, 1600.0).size == 0
@@ -245,6 +267,76 @@ def test_optical_depths_are_observables() -> None:
     assert np.all(np.isnan(study.rungs.observable[:, -1]))
     assert np.isnan(study.limit.observable.value[-1])
     assert study.limit.observable.fitted[-1] == 0
+
+
+@pytest.mark.parametrize(
+    "redshifts", [(1800.0, 200.0), (1800.0, 1090.0, 1089.0, 200.0), tuple(range(200, 1801, 2))]
+)
+def test_grid_of_a_study_has_no_gaps(redshifts: tuple[float, ...]) -> None:
+    setup = small_setup(4, grid={"redshift_start": 1900.0, "redshifts": redshifts})
+    dense = study_setup(setup, (500.0, 1850.0, 20.0))
+    grid = output_redshifts(dense).tolist()
+    # What the setup delivers is kept to the bit, and so is what is asked inside it.
+    assert {*map(float, redshifts), 500.0} <= set(grid)
+    assert (grid[0], grid[-1]) == (1800.0, 200.0)
+    steps = -np.diff(np.log1p(grid))
+    assert np.all(steps > 0.0)
+    assert np.all(steps <= 0.03 * (1.0 + 1e-9))
+    assert study_setup(dense) is dense
+    # Three hundredths of a unit of ln(1 + z), 2.2 in all, and one cut more at each output.
+    assert len(grid) <= len(redshifts) + 1 + 75
+
+
+def test_answers_do_not_depend_on_the_outputs_of_the_setup() -> None:
+    # Verdict and findings of three outputs and of two hundred.
+    asked = requirement(
+        "[observables]\nz_drag = 1e-2\n'x_e(700)' = 0.1\n'T_m(250)' = 1e-3\n"
+        "[[ranges]]\nquantity = 'x_e'\nredshift = [230.0, 1500.0]\nrelative = 0.3\n"
+        "[response]\nlimit_sigma = 1.0\n[response.rows]\nnames = ['a']\n"
+        "redshift = [300.0, 900.0, 1400.0]\nkernels = [[0.0], [1.0], [0.0]]\n"
+        "covariance = [[1e-4]]\n"
+    )
+    few, many = (
+        level_study(level_setup(count), (4, 6, 8, 11, 15), also_at=(210.0, 1600.0))
+        for count in (3, 200)
+    )
+    one, other = (verdict(study, 0.3, 210.0, 1600.0) for study in (few, many))
+    assert one.n_max == other.n_max
+    assert one.error == pytest.approx(other.error, rel=1e-6)
+    assert one.redshift == other.redshift == 210.0
+    first, second = (demands(study, asked) for study in (few, many))
+    assert first.n_max == second.n_max
+    for some, others in zip(first.rungs, second.rungs, strict=True):
+        for finding, same in zip(some, others, strict=True):
+            assert finding.name == same.name
+            assert finding.passed == same.passed
+            assert finding.error == pytest.approx(same.error, rel=1e-3), finding.name
+
+
+def test_bar_of_the_limit_is_held_against_the_correction() -> None:
+    study = small_study()
+    found = check_limit(study)
+    assert (found.low, found.high, found.n_without_law) == (200.0, 1600.0, 0)
+    limit = study.limit.free_electron_fraction
+    row = int(np.flatnonzero(study.redshift == found.redshift)[0])
+    correction = abs(np.log(limit.value[row] / study.rungs.free_electron_fraction[-1, row]))
+    assert found.bar_over_correction == pytest.approx(limit.relative_error[row] / correction)
+    # Points without a law are left out and counted.
+    fitted = np.where(study.redshift == found.redshift, 0, limit.fitted)
+    without = dataclasses.replace(limit, fitted=fitted)
+    bare = dataclasses.replace(
+        study, limit=dataclasses.replace(study.limit, free_electron_fraction=without)
+    )
+    less = check_limit(bare)
+    assert less.n_without_law == 1
+    assert less.n_redshift == found.n_redshift
+    assert less.bar_over_correction < found.bar_over_correction
+    held = check_held_out(study)
+    assert held is not None
+    assert held.largest_miss_over_bar.shape == (1,)
+    assert held.largest_miss_over_bar[0] <= 1.0
+    assert 0.0 < held.largest_bar_over_correction[0] < np.inf
+    assert check_held_out(dataclasses.replace(study, held_out=None)) is None
 
 
 def requirement(text: str) -> Requirement:
@@ -290,3 +382,6 @@ def test_notes_say_which_lines_escape() -> None:
     notes = " ".join(small_study().notes)
     assert "Lyman-alpha alone" in notes
     assert "no statement about a CMB spectrum" in notes
+    assert "the outputs end at" not in notes
+    late = dataclasses.replace(small_study(), redshift=small_study().redshift + 200.0)
+    assert "the outputs end at z = 400: z_*, k_D, z_drag" in " ".join(late.notes)

@@ -159,15 +159,28 @@ def test_map_draws_a_whole_shell_over_all_its_l() -> None:
         assert np.all(grid.mask[n:, n - 2])
 
 
-def test_curves_go_on_through_whole_shells() -> None:
+def test_map_marks_where_whole_shells_begin() -> None:
+    axes = departure_map_figure(with_shells()).axes[0]
+    assert axes.lines[0].get_xdata() == [4.5, 4.5]
+    assert "whole shells" in axes.texts[0].get_text()
+    plain = departure_map_figure(made_up_history()).axes[0]
+    assert not plain.lines and not plain.texts
+
+
+def test_whole_shells_are_a_series_of_their_own() -> None:
     history = with_shells()
     drawn = lines_of(departure_curves_figure(history, (900.0,)).axes[0])
     levels, values = history.levels("H I"), history.log_departures("H I")[0]
     for l, name in enumerate("spd"):
         n, curve = drawn[f"$n${name}"]
-        assert n.tolist() == list(range(max(2, l + 1), 10))
-        assert curve[n > 4].tolist() == values[levels.shell].tolist()
-    assert drawn["mean over $l$"][1][-5:] == pytest.approx(values[levels.shell], rel=1e-14)
+        # An l ends where levels have one.
+        assert n.tolist() == list(range(max(2, l + 1), 5))
+        assert curve.tolist() == values[(levels.l == l) & (levels.n > 1)].tolist()
+    assert drawn["mean over $l$"][0].tolist() == [2.0, 3.0, 4.0]
+    n, curve = drawn["whole shells"]
+    assert n.tolist() == [5, 6, 7, 8, 9]
+    assert curve.tolist() == values[levels.shell].tolist()
+    assert "whole shells" not in lines_of(departure_curves_figure(made_up_history()).axes[0])
 
 
 @pytest.mark.parametrize("redshifts", [(), (100.0,) * 5])

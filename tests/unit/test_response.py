@@ -73,6 +73,20 @@ def test_sigma_is_the_quadratic_form() -> None:
     assert RESPONSE.sigma(z, np.full(4, -2e-3)) == pytest.approx(2.0 * found, rel=ROUND_OFF)
 
 
+def test_sigma_is_finite_up_to_the_bounds() -> None:
+    z = np.array([1500.0, 1000.0, 500.0, 100.0])
+    # Correlation 1 - 2e-10: its smallest eigenvalue is twice the bound. Kernels and spreads as
+    # far apart as is allowed.
+    close = 1.0 - 2e-10
+    for kernel, variance in ((1e50, 1e-100), (1e-300, 1e100)):
+        rows = [[variance, close * variance], [close * variance, variance]]
+        far = Response(NAMES, REDSHIFT, [[kernel, -kernel]] * 4, rows)
+        found = far.sigma(z, np.full(4, 2.0))
+        # Along the eigenvector (1, -1): closed form.
+        change = 2.0 * kernel * np.log1p(REDSHIFT)[[0, -1]] @ [-1.0, 1.0]
+        assert found == pytest.approx(change * math.sqrt(2.0 / 2e-10 / variance), rel=1e-5)
+
+
 def test_units_do_not_matter() -> None:
     # The second observable in units 1e9 times as large.
     scaled = Response(
@@ -143,6 +157,15 @@ WRONG_FILES = {
         TEXT.replace("one, 4, 1", "one, 4, 7").replace("two, 1, 9", "two, 7, 9"),
         "not positive definite",
     ),
+    "large kernel": (TEXT.replace("300, 2", "300, 2e51"), "kernel 2e+51 in row 2, column 1: allow"),
+    "large variance": (TEXT.replace("one, 4", "one, 4e100"), "variance 4e+100 in row 1: allowed"),
+    "small variance": (TEXT.replace("two, 1, 9", "two, 1, 9e-101"), "allowed are 1e-100 to 1e+100"),
+    "close to singular": (
+        TEXT.replace("one, 4, 1", "one, 4, 5.9999999999").replace(
+            "two, 1, 9", "two, 5.9999999999, 9"
+        ),
+        "eigenvalue of its correlation matrix is 1.7e-11, at least 1e-10 is needed",
+    ),
     "singular": (
         TEXT.replace("one, 4, 1", "one, 4, 6").replace("two, 1, 9", "two, 6, 9"),
         "not positive definite",
@@ -168,7 +191,7 @@ def test_files_that_cannot_be_read(tmp_path: Path, monkeypatch: pytest.MonkeyPat
             read_response(path)
     monkeypatch.setattr("levelnet.studies.response._MAX_BYTES", 10)
     (tmp_path / "large.csv").write_text(TEXT)
-    with pytest.raises(InputError, match="over 0 MB, no response"):
+    with pytest.raises(InputError, match="over 10 bytes"):
         read_response(tmp_path / "large.csv")
 
 

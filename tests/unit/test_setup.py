@@ -211,7 +211,7 @@ def test_files_that_cannot_be_read(tmp_path: Path) -> None:
     with pytest.raises(InputError, match="cannot be read: Is a directory"):
         load_setup(tmp_path)
     (tmp_path / "binary.toml").write_bytes(b"\x89HDF\r\n\x1a\n\xff")
-    with pytest.raises(InputError, match=r"binary\.toml: cannot be read: not UTF-8"):
+    with pytest.raises(InputError, match=r"binary\.toml: not UTF-8 text"):
         load_setup(tmp_path / "binary.toml")
     (tmp_path / "broken.toml").write_text("[hydrogen\nn_max = 3\n")
     with pytest.raises(InputError, match=r"broken\.toml: not valid TOML: .*line 1"):

@@ -18,7 +18,7 @@ from levelnet.history.setup import Setup
 from levelnet.pieces import MemoryPieces
 from levelnet.studies.level_records import Estimate, LevelStudy
 from levelnet.studies.levels import carry_all, level_study
-from levelnet.studies.rung import RungResult, compute_rung, rung_setup
+from levelnet.studies.rung import RungResult, compute_rung, rung_setup, study_setup
 from tests.small_runs import COSMOLOGY
 from tests.tolerances import published
 
@@ -47,7 +47,8 @@ def study_of(case: str, rungs: tuple[int, ...] = LADDER) -> LevelStudy:
 
 @lru_cache(maxsize=8)
 def longer(case: str, n_max: int) -> RungResult:
-    return compute_rung(rung_setup(setup_of(case), n_max, None, 1e-8), (1000.0,), PIECES)
+    setup = rung_setup(study_setup(setup_of(case)), n_max, None, 1e-8)
+    return compute_rung(setup, (1000.0,), PIECES)
 
 
 def asked(study: LevelStudy) -> np.ndarray:

@@ -8,6 +8,7 @@ from __future__ import annotations
 import dataclasses
 import json
 import os
+import re
 import signal
 import subprocess
 import sys
@@ -57,6 +58,9 @@ def test_study_from_setup_to_verdict(folder: Path, capsys: pytest.CaptureFixture
     assert "foreseen from rungs up to 10" in said
     assert "for the requirement: n_max = " in said
     assert "optical_depth(1000)" in said
+    assert re.search(r"\nk_D +0\.1\d+ +\d\.\de-\d\d +Mpc\^-1\n", said)
+    assert "of the correction from the longest rung to all levels (at z = " in said
+    assert "MORE THAN 20 %" in said  # rungs to 12 tell little
     study = levelnet.read("good-levels.h5")
     assert isinstance(study, LevelStudy)
     assert study.rungs.n_max.tolist() == [4, 5, 6, 8, 10, 12]
@@ -86,6 +90,9 @@ def test_study_from_setup_to_verdict(folder: Path, capsys: pytest.CaptureFixture
     )
     assert shown["verdict"]["within"] == 0.2
     assert shown["held_out"]["n_max"] == [12]
+    assert shown["rungs"]["population"] == study.rungs.population.tolist()
+    assert shown["population_redshift"] == study.population_redshift.tolist()
+    assert shown["limit_check"]["bar_over_correction"] > 0.2
     assert main(["show", "good-levels.h5", "--plot", "again"]) == 0
     assert (folder / "again" / "levels.svg").exists()
     capsys.readouterr()
@@ -100,16 +107,17 @@ def test_study_from_setup_to_verdict(folder: Path, capsys: pytest.CaptureFixture
         (["--rungs", "4,5,5,6"], "each must be larger than the one before"),
         (["--rungs", "3,4,5,6"], "the lowest allowed is 4"),
         (["--rungs", "4,5,six"], '"six" is no whole number'),
-        (["--rungs", "4,5,6,70000"], "memory needed"),
+        (["--rungs", "4,5,6,999999"], "rungs = 4, 5, 6, 999999: allowed are 4 to 1000"),
         (["--rungs", "4,5,6,8", "--resolve", "8"], "must be below the longest rung"),
         (["--rungs", "4,5,6,8", "--within", "0"], "within = 0"),
-        (["--rungs", "4,5,6,8", "--between", "1", "2"], "no output redshift"),
+        (["--rungs", "4,5,6,8", "--between", "1", "2"], "they run from 200 to 1700"),
+        (["--rungs", "4,5,6,8", "--between", "100", "1600"], "do not cover that"),
         (["--rungs", "4,5,6,8", "--workers", "0"], "--workers = 0"),
         (["--rungs", "4,5,6,8", "--output", "no/such/x.h5"], "does not exist"),
         (["--rungs", "4,5,6,8", "--plot", "good.toml"], "is a file, not a folder"),
         (["--requirement", "none.toml"], "none.toml: cannot be read"),
         (["--requirement", "good.toml"], "unknown key"),
-        ([], "a ladder with 1 rung"),  # n_max = 4 of the setup
+        ([], "hydrogen.n_max = 4: too low for a ladder up to it; give one, such as --rungs 20"),
     ],
 )
 def test_complaints_are_one_line(
@@ -123,6 +131,28 @@ def test_complaints_are_one_line(
     assert message in said.err
     assert [path.name for path in folder.iterdir()] == ["good.toml"]
     assert time.monotonic() - start < 5.0
+
+
+def test_default_range_is_what_the_outputs_cover(
+    folder: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    (folder / "late.toml").write_text(GOOD.replace("end = 200.0", "end = 900.0"))
+    words = ["levels", "late.toml", "--rungs", "4,5,6,8", "--resolve", "6", "--quiet"]
+    assert main([*words, "--workers", "1"]) == 0
+    said = capsys.readouterr().out
+    assert "for 0.1 % in x_e at 900 < z < 1600: " in said
+    assert "against every l resolved: l resolved to n = 6 (of 6 tried, at n_max = 8)" in said
+    assert "the outputs end at z = 900" in said
+
+
+def test_whole_shells_of_a_setup_are_refused(
+    folder: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    (folder / "shells.toml").write_text(GOOD.replace("n_max = 4", "n_max = 9\nresolve_l_to = 5"))
+    assert main(["levels", "shells.toml", "--rungs", "4,5,6,8"]) == 2
+    said = capsys.readouterr().err
+    assert "hydrogen.resolve_l_to = 5: the study sets it itself" in said
+    assert "--resolve 5" in said
 
 
 def test_verdict_of_a_file_is_what_the_run_said() -> None:
