@@ -4,9 +4,12 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
+import numpy as np
+
 from ..arrays import FloatArray, IntArray, frozen_array
 from ..errors import Outcome
 from ..history.setup import Setup
+from .convergence import LARGEST_STEP, SHORTEST_LADDER
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -240,4 +243,18 @@ def level_notes(study: LevelStudy) -> tuple[str, ...]:
         f"{accuracy:g} by tolerance (x_e measured: {study.noise.common:.0e}); what the physics "
         "leaves out (collisions, line transfer, helium) is larger and in none of them",
         "no statement about a CMB spectrum is made without a response file",
+        *_ladder_notes(study.rungs.n_max),
+    )
+
+
+def _ladder_notes(n_max: IntArray) -> tuple[str, ...]:
+    """Say so where a ladder is none of those whose error bars have been measured."""
+    step, longest = float(np.max(n_max[1:] / n_max[:-1])), int(n_max[-1])
+    if step <= LARGEST_STEP and longest >= SHORTEST_LADDER:
+        return ()
+    found = f"largest step a factor {step:.2g}, longest rung {longest}"
+    return (
+        f"error bars are untested for this ladder ({found}): they have been held against longer "
+        f"rungs for steps of a factor {LARGEST_STEP:g} or less and a longest rung of "
+        f"{SHORTEST_LADDER} or more",
     )
