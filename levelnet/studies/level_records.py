@@ -252,7 +252,7 @@ def _ladder_notes(n_max: IntArray) -> tuple[str, ...]:
     step, longest = float(np.max(n_max[1:] / n_max[:-1])), int(n_max[-1])
     if step <= LARGEST_STEP and longest >= SHORTEST_LADDER:
         return ()
-    found = f"largest step a factor {step:.2g}, longest rung {longest}"
+    found = f"largest step a factor {step:.3g}, longest rung {longest}"
     return (
         f"error bars are untested for this ladder ({found}): they have been held against longer "
         f"rungs for steps of a factor {LARGEST_STEP:g} or less and a longest rung of "
