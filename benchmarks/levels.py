@@ -5,8 +5,8 @@
 1. Ladders of many kinds (fine and coarse, short and long, few rungs and many), cut from one pool of
    rungs for each of several universes and choices of lines. Each ladder foresees every longer rung,
    and its limit is held against that of all rungs from 20 on; so is the error by truncation at
-   every n_max of the pool, between its rungs and beyond them. Printed: the largest misses over the bar at
-   any redshift, and the largest bar over the correction at 200 <= z <= 1600.
+   every n_max of the pool, between its rungs and beyond them. Printed: the largest misses over
+   the bar at any redshift, and the largest bar over the correction at 200 <= z <= 1600.
 2. Facts: x_e(100)/x_e(350) - 1 at z = 200, the exponent of the approach.
 3. Process time of each rung, and wall-clock time of the whole study on two processes.
 """

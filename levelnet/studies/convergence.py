@@ -135,10 +135,11 @@ def truncation_error(
     if at < n_max[0]:
         raise InputError(f"n_max = {at}: below the shortest rung, {n_max[0]}")
     limit = carry(n_max, logarithms, noise)
+    rungs: FloatArray = n_max.astype(np.float64) + 0.5
     if at > n_max[-1]:
-        error, bar = _beyond(n_max + 0.5, logarithms, noise, at + 0.5)
+        error, bar = _beyond(rungs, logarithms, noise, at + 0.5)
         return np.where(limit.fitted, error, 0.0), np.where(limit.fitted, bar, limit.bar)
-    error, bar = _between(np.log(n_max + 0.5), logarithms - limit.value, float(np.log(at + 0.5)))
+    error, bar = _between(np.log(rungs), logarithms - limit.value, float(np.log(at + 0.5)))
     return error, bar + limit.bar
 
 

@@ -295,20 +295,3 @@ def test_notes_say_which_lines_escape() -> None:
     notes = " ".join(small_study().notes)
     assert "Lyman-alpha alone" in notes
     assert "no statement about a CMB spectrum" in notes
-
-
-@pytest.mark.parametrize(
-    ("rungs", "said"),
-    [
-        ((4, 5, 6, 8, 10, 13), "largest step a factor 1.3, longest rung 13"),
-        ((20, 41, 60, 80, 100, 120), "largest step a factor 2.05, longest rung 120"),
-        ((12, 24, 30, 36, 42, 49), "longest rung 49"),
-        ((12, 24, 30, 36, 42, 50), ""),
-    ],
-)
-def test_notes_say_where_bars_are_untested(rungs: tuple[int, ...], said: str) -> None:
-    study = small_study()
-    ladder = dataclasses.replace(study.rungs, n_max=np.array(rungs))
-    notes = " ".join(dataclasses.replace(study, rungs=ladder).notes)
-    assert ("error bars are untested for this ladder" in notes) == bool(said)
-    assert said in notes
