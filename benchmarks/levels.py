@@ -1,11 +1,12 @@
 """Is the error bar of the limit honest, what is it worth, and what does a ladder cost?
 
-    python -m benchmarks.levels [--longest 500]
+    python -m benchmarks.levels [--longest 500] [--only-bars | --only-cost]
 
 1. Ladders of many kinds (fine and coarse, short and long, few rungs and many), cut from one pool of
    rungs for each of several universes and choices of lines. Each ladder foresees every longer rung,
-   and its limit is held against that of all rungs from 20 on. Printed: the largest miss over the
-   bar at any redshift, and the largest bar over the correction at 200 <= z <= 1600.
+   and its limit is held against that of all rungs from 20 on; so is the error by truncation at
+   every n_max of the pool, between its rungs and beyond them. Printed: the largest misses over
+   the bar at any redshift, and the largest bar over the correction at 200 <= z <= 1600.
 2. Facts: x_e(100)/x_e(350) - 1 at z = 200, the exponent of the approach.
 3. Process time of each rung, and wall-clock time of the whole study on two processes.
 """
@@ -21,12 +22,12 @@ from benchmarks.timing import machine  # pins threads
 # isort: split
 import numpy as np
 
-from levelnet.arrays import FloatArray
+from levelnet.arrays import FloatArray, IntArray
 from levelnet.background.cosmology import Cosmology
 from levelnet.cli.demo import demo_text
 from levelnet.distilled.nodes import process_pool
 from levelnet.history.setup import Setup, parse_setup
-from levelnet.studies.convergence import Carried, carry
+from levelnet.studies.convergence import carry, truncation_error
 from levelnet.studies.levels import level_study
 from levelnet.studies.rung import compute_rung, rung_setup
 
@@ -58,6 +59,9 @@ LADDERS = (
     (10, 14, 20, 28),
     (30, 45, 70, 100),
     (40, 56, 80, 112),
+    (10, 20, 40, 45, 56),
+    (10, 14, 28, 56, 100),
+    (28, 40, 56, 100),
     (14, 28, 56, 112),
     (20, 40, 80, 160),
 )
@@ -76,29 +80,45 @@ def pool_of(cosmology: Cosmology, lines: dict[str, Any]) -> FloatArray:
         return np.log([one.result().electron_fraction for one in reversed(found)])
 
 
-def carried(logs: FloatArray, ladder: tuple[int, ...], to: float = np.inf) -> Carried:
+def ladder_of(logs: FloatArray, ladder: tuple[int, ...]) -> tuple[IntArray, FloatArray, FloatArray]:
+    """Rungs, ln x_e on them, and noise: what the fits take."""
     rows = [POOL.index(n) for n in ladder]
-    noise = np.maximum(NOISE * (logs[0] - logs[-1]), 1e-15)
-    return carry(np.array(ladder), logs[rows], noise, to)
+    return np.array(ladder), logs[rows], np.maximum(NOISE * (logs[0] - logs[-1]), 1e-15)
+
+
+def worst_misses(
+    logs: FloatArray, ladder: tuple[int, ...], limit: FloatArray
+) -> tuple[float, float, float]:
+    """Largest miss over the bar: of longer rungs, of truncation between the rungs, and beyond."""
+    given = ladder_of(logs, ladder)
+    longer, between, beyond = [0.0], [0.0], [0.0]
+    for n, actual in zip(POOL, logs, strict=True):
+        if n < ladder[0]:
+            continue
+        error, bar = truncation_error(*given, n)
+        miss = np.max(np.abs(error - (actual - limit)) / bar)
+        (between if n <= ladder[-1] else beyond).append(float(miss))
+        if n > ladder[-1]:
+            seen = carry(*given, float(n))
+            longer.append(float(np.max(np.abs(seen.value - actual) / seen.bar)))
+    return max(longer), max(between), max(beyond)
 
 
 def held_against_longer(logs: FloatArray) -> None:
     asked = np.array(REDSHIFTS) >= 200.0
-    reference = carried(logs, ALL)
+    reference = carry(*ladder_of(logs, ALL))
     print(
-        f"{'ladder':44s} {'miss/bar of longer rungs':>25s} {'of the limit':>13s} {'bar/corr.':>10s}"
+        f"{'ladder':34s}{'miss/bar: longer':>18s}{'limit':>7s}{'between':>9s}{'beyond':>8s}", end=""
     )
+    print(f"{'bar/corr.':>11s}")
     for ladder in LADDERS:
-        misses = [0.0]
-        for n in POOL:
-            if n > ladder[-1]:
-                seen = carried(logs, ladder, float(n))
-                misses.append(np.max(np.abs(seen.value - logs[POOL.index(n)]) / seen.bar))
-        limit = carried(logs, ladder)
+        limit = carry(*ladder_of(logs, ladder))
+        longer, between, beyond = worst_misses(logs, ladder, reference.value)
         miss = np.max(np.abs(limit.value - reference.value) / limit.bar)
         worth = limit.bar / np.abs(limit.value - logs[POOL.index(ladder[-1])])
         name = ", ".join(str(n) for n in ladder)
-        print(f"{name:44s} {max(misses):25.2f} {miss:13.2f} {np.max(worth[asked]):10.3f}")
+        print(f"{name:34s}{longer:18.2f}{miss:7.2f}{between:9.2f}{beyond:8.2f}", end="")
+        print(f"{np.max(worth[asked]):11.3f}", flush=True)
 
 
 def cost(longest: int) -> None:
@@ -139,13 +159,15 @@ def main() -> None:
     parser = argparse.ArgumentParser(description=__doc__)
     parser.add_argument("--longest", type=int, default=200, help="longest rung of the timing")
     parser.add_argument("--only-cost", action="store_true", help="leave out the first part")
+    parser.add_argument("--only-bars", action="store_true", help="leave out the other parts")
     options = parser.parse_args()
     print(machine())
     if not options.only_cost:
         for name, (cosmology, lines) in CASES.items():
             print(f"\n{name}")
             held_against_longer(pool_of(cosmology, lines))
-    cost(options.longest)
+    if not options.only_bars:
+        cost(options.longest)
 
 
 if __name__ == "__main__":

@@ -4,9 +4,12 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
+import numpy as np
+
 from ..arrays import FloatArray, IntArray, frozen_array
 from ..errors import Outcome
 from ..history.setup import Setup
+from .convergence import LARGEST_STEP, SHORTEST_LADDER
 
 # Outputs that end above it leave too many electrons out of the optical depth: z_* of the demo with
 # n_max = 8 is 0.08 % too high with an end at 400, and 0.5 % with one at 800.
@@ -244,6 +247,7 @@ def level_notes(study: LevelStudy) -> tuple[str, ...]:
         f"{accuracy:g} by tolerance (x_e measured: {study.noise.common:.0e}); what the physics "
         "leaves out (collisions, line transfer, helium) is larger and in none of them",
         "no statement about a CMB spectrum is made without a response file",
+        *_ladder_notes(study.rungs.n_max),
         *_late_end(float(study.redshift[-1])),
     )
 
@@ -255,4 +259,17 @@ def _late_end(end: float) -> tuple[str, ...]:
     return (
         f"the outputs end at z = {end:g}: z_*, k_D, z_drag and optical depths count the electrons "
         f"from there up only; with redshift_end above {_LATEST_END:g} their values are off",
+    )
+
+
+def _ladder_notes(n_max: IntArray) -> tuple[str, ...]:
+    """Say so where a ladder is none of those whose error bars have been measured."""
+    step, longest = float(np.max(n_max[1:] / n_max[:-1])), int(n_max[-1])
+    if step <= LARGEST_STEP and longest >= SHORTEST_LADDER:
+        return ()
+    found = f"largest step a factor {step:.3g}, longest rung {longest}"
+    return (
+        f"error bars are untested for this ladder ({found}): they have been held against longer "
+        f"rungs for steps of a factor {LARGEST_STEP:g} or less and a longest rung of "
+        f"{SHORTEST_LADDER} or more",
     )
