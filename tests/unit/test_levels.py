@@ -357,16 +357,16 @@ def test_smallest_n_max_for_a_requirement() -> None:
     low, high = float(study.redshift[-2]), float(study.redshift[3])
     part = f"[[ranges]]\nquantity = 'x_e'\nredshift = [{low}, {high}]\nrelative = 0.9\n"
     found = demands(study, requirement(part))
-    assert found.n_max == verdict(study, 0.9, low, high).n_max == 8
+    assert found.n_max == verdict(study, 0.9, low, high).n_max == 9
     passed = [rung[0].passed for rung in found.rungs]
     assert passed == (rung_errors(study, low, high) <= 0.9).tolist()
-    assert demands_text(found, RUNGS[-1]).startswith("for the requirement: n_max = 8")
+    assert demands_text(found, RUNGS[-1]).startswith("for the requirement: n_max = 9")
     # Two demands: the harder one decides, whichever it is.
-    for allowed, n_max in (("1e-3", 27), ("1e-1", 8)):  # frozen: the law at small n proves nothing
+    for allowed, n_max in (("1e-3", 27), ("1e-1", 9)):  # frozen: the law at small n proves nothing
         drag = f"[observables]\nz_drag = {allowed}\n"
         alone = demands(study, requirement(drag)).n_max
         assert alone is not None
-        assert demands(study, requirement(drag + part)).n_max == max(alone, 8) == n_max
+        assert demands(study, requirement(drag + part)).n_max == max(alone, 9) == n_max
     out_of_reach = demands(study, requirement("[observables]\nk_D = 1e-9\n"))
     assert out_of_reach.n_max is None
     assert "not known from these rungs" in demands_text(out_of_reach, RUNGS[-1])
