@@ -132,7 +132,7 @@ def cost(longest: int) -> None:
         print(f"{n:5d} {time.process_time() - start:8.1f}", flush=True)
     start = time.perf_counter()
     with process_pool(2) as pool:
-        study = level_study(setup, rungs, executor=pool)
+        study = level_study(setup, rungs, executor=pool, workers=2)
     print(
         f"study of all of them on two processes: {time.perf_counter() - start:.0f} s of wall clock"
     )

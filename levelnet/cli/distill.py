@@ -96,12 +96,14 @@ def run(options: argparse.Namespace, console: Console) -> int:
     from ..store import write
 
     start = time.monotonic()
-    with console.progress() as progress, worker_processes(options.workers) as executor:
+    workers = worker_count(options.workers)
+    with console.progress() as progress, worker_processes(workers) as executor:
         table = distill(
             setup,
             kept=kept,
             tolerance=options.tolerance,
             executor=executor,
+            workers=workers,
             pieces=pieces,
             progress=progress,
             certify=not options.no_certificate,
@@ -154,13 +156,18 @@ def kept_levels(text: str) -> tuple[tuple[int, int], ...]:
     return tuple(sorted(found))
 
 
-@contextmanager
-def worker_processes(workers: int | None) -> Iterator[Executor | None]:
-    """Worker processes; None where one process is enough."""
+def worker_count(workers: int | None) -> int:
+    """How many worker processes are asked for; one for each core that may be used by default."""
     count = len(os.sched_getaffinity(0)) if hasattr(os, "sched_getaffinity") else os.cpu_count()
     count = (count or 1) if workers is None else workers
     if not 1 <= count <= 1024:
         raise InputError(f"--workers = {count}: allowed are 1 to 1024")
+    return count
+
+
+@contextmanager
+def worker_processes(count: int) -> Iterator[Executor | None]:
+    """Worker processes; None where one process is enough."""
     if count == 1:
         yield None
         return

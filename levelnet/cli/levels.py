@@ -10,7 +10,7 @@ from typing import TYPE_CHECKING
 
 from ..errors import InputError
 from .console import Console
-from .distill import worker_processes
+from .distill import worker_count, worker_processes
 from .level_output import level_summary, level_values
 from .output import print_json, size_text, time_text
 from .paths import check_folder, check_target
@@ -210,7 +210,8 @@ def _study(
             f"{size_text(cost.memory_bytes)} of memory"
         )
     pieces = None if options.no_cache else cache_pieces(console)
-    with console.progress() as progress, worker_processes(options.workers) as executor:
+    workers = worker_count(options.workers)
+    with console.progress() as progress, worker_processes(workers) as executor:
         return level_study(
             setup,
             ladder,
@@ -218,6 +219,7 @@ def _study(
             optical_depth_to=() if requirement is None else depths_asked(requirement),
             also_at=(question.low, question.high),
             executor=executor,
+            workers=workers,
             pieces=pieces,
             progress=progress,
         )

@@ -47,6 +47,7 @@ def distill(  # noqa: PLR0913  choices by name, each with a default
     radiation_range_k: tuple[float, float] = (25.0, 9000.0),
     ratio_range: tuple[float, float] = (0.01, 4.0),
     executor: Executor | None = None,
+    workers: int = 1,
     pieces: Pieces | None = None,
     progress: Progress | None = None,
     certify: bool = True,
@@ -70,6 +71,9 @@ def distill(  # noqa: PLR0913  choices by name, each with a default
         Computes the exact reductions, for example
         ``ProcessPoolExecutor(2, mp_context=multiprocessing.get_context("spawn"))``; None: this
         process does. The bits of the table are the same.
+    workers : int, at least 1
+        How many reductions the executor runs at once; as many atoms must fit in memory. A pool that
+        breaks is replaced by one of as many processes.
     pieces : Pieces, optional
         Where finished reductions are kept, such as ``levelnet.pieces.FolderPieces(folder)``. A
         build that was killed goes on from there, to the same bits.
@@ -96,7 +100,7 @@ def distill(  # noqa: PLR0913  choices by name, each with a default
     ranges = _ranges(radiation_range_k, ratio_range)
     if not TIGHTEST <= tolerance <= LOOSEST:
         raise InputError(f"tolerance = {tolerance:g}: allowed are {TIGHTEST:g} to {LOOSEST:g}")
-    _check_memory(setup, executor)
+    check_memory(setup, workers)
     tell = progress or (lambda stage, fraction: None)
     check_overrides(setup)
     atom = Atom.of(setup.hydrogen, choice, setup.rates.network)
@@ -104,7 +108,7 @@ def distill(  # noqa: PLR0913  choices by name, each with a default
     with threadpool_limits(limits=1, user_api="blas"):
         constants = outline(atom)[2]
         counter = _Counter(tell, node_count(*radiation_range_k, _SERIES * tolerance))
-        source = NodeSource(atom, executor, pieces, counter)
+        source = NodeSource(atom, executor, pieces, counter, workers)
         series = _series(source, constants, ranges, _SERIES * tolerance)
         tell("fitting patches", 0.0)
         patches = fit_patches(series, constants, ranges, _PATCHES * tolerance)
@@ -210,8 +214,3 @@ def _ranges(radiation_k: tuple[float, float], ratio: tuple[float, float]) -> Ran
             f"{_LARGEST_RATIO:g}, with 1 inside"
         )
     return Ranges(math.log(low), math.log(high), math.log(least), math.log(largest))
-
-
-def _check_memory(setup: Setup, executor: Executor | None) -> None:
-    """Each worker process holds an atom of its own."""
-    check_memory(setup, copies=int(getattr(executor, "_max_workers", 1)))

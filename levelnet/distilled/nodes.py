@@ -155,6 +155,8 @@ class NodeSource:
         Where nodes are kept.
     on_node : callable
         Told after each node.
+    workers : int
+        How many processes a pool gets that replaces a broken one.
     known : dict
         Nodes by temperature in K.
     """
@@ -163,6 +165,7 @@ class NodeSource:
     executor: Executor | None
     pieces: Pieces | None
     on_node: Callable[[], None]
+    workers: int = 1
     known: dict[float, FloatArray] = field(default_factory=dict)
 
     def at(self, temperatures_k: FloatArray) -> FloatArray:
@@ -202,10 +205,9 @@ class NodeSource:
             return
         left = dict.fromkeys(missing)
         yield from _through(self.executor, self.atom, left)
-        workers = int(getattr(self.executor, "_max_workers", 1))
         for _ in range(_ROUNDS - 1):
             if left:
-                with process_pool(workers) as pool:
+                with process_pool(self.workers) as pool:
                     yield from _through(pool, self.atom, left)
         for temperature_k in list(left):
             yield temperature_k, _alone(self.atom, temperature_k)

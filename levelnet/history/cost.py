@@ -79,6 +79,8 @@ def check_memory(setup: Setup, copies: int = 1, more_bytes: float = 0.0) -> Cost
     With `copies` worker processes, each of which holds an atom of its own, all must fit at once;
     `more_bytes` is what else the caller will hold.
     """
+    if copies < 1:
+        raise InputError(f"workers = {copies}: at least 1 is needed")
     cost = estimate(setup)
     cost = Cost(cost.memory_bytes + more_bytes, cost.seconds)
     available = available_memory_bytes()

@@ -36,7 +36,7 @@ _MOST_HELD_OUT = 2
 _POPULATION_REDSHIFTS = 12
 
 
-def level_study(
+def level_study(  # noqa: PLR0913  choices by name, each with a default
     setup: Setup,
     rungs: Iterable[int] | None = None,
     *,
@@ -44,6 +44,7 @@ def level_study(
     optical_depth_to: Iterable[float] = (),
     also_at: Iterable[float] = (),
     executor: Executor | None = None,
+    workers: int = 1,
     pieces: Pieces | None = None,
     progress: Progress | None = None,
 ) -> LevelStudy:
@@ -67,6 +68,8 @@ def level_study(
         outside the outputs of the setup are left out.
     executor : concurrent.futures.Executor, optional
         Runs the rungs, the longest first; None: this process does. The bits are the same.
+    workers : int, at least 1
+        How many rungs the executor runs at once; as many must fit in memory.
     pieces : Pieces, optional
         Where reduced networks are kept; a study that was killed goes on from there.
     progress : callable, optional
@@ -104,7 +107,7 @@ def level_study(
     jobs = [rung_setup(setup, n, None, relative) for n in ladder]
     jobs += [rung_setup(setup, ladder[-1], top, relative) for top in shells]
     coarse = [rung_setup(setup, n, None, _COARSER * relative) for n in ladder[:2]]
-    check_memory(jobs[len(ladder) - 1], int(getattr(executor, "_max_workers", 1)))
+    check_memory(jobs[len(ladder) - 1], workers)
     places = _population_redshifts(output_redshifts(setup))
     task = partial(
         compute_rung,

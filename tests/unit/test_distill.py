@@ -40,7 +40,7 @@ def same_bits(one: EffectiveTable, other: EffectiveTable) -> bool:
 
 def test_processes_and_threads_give_the_bits_of_one_process() -> None:
     with process_pool(2) as pool:
-        assert same_bits(distill(SETUP, executor=pool, certify=False), plain())
+        assert same_bits(distill(SETUP, executor=pool, workers=2, certify=False), plain())
     with ThreadPoolExecutor(3) as threads:
         assert same_bits(distill(SETUP, executor=threads, certify=False), plain())
 
@@ -162,8 +162,8 @@ def test_a_broken_pool_is_replaced(monkeypatch: pytest.MonkeyPatch) -> None:
         return ThreadPoolExecutor(workers)
 
     monkeypatch.setattr(nodes, "process_pool", pool)
-    assert same_bits(distill(SETUP, executor=Breaking(7), certify=False), plain())
-    assert pools
+    assert same_bits(distill(SETUP, executor=Breaking(7), workers=3, certify=False), plain())
+    assert pools == [3]
 
 
 def test_an_input_that_kills_every_worker_is_named(monkeypatch: pytest.MonkeyPatch) -> None:
@@ -283,8 +283,10 @@ def test_memory_counts_every_worker(monkeypatch: pytest.MonkeyPatch) -> None:
     # Room for one atom of n_max = 5 and not for four.
     monkeypatch.setattr(cost, "available_memory_bytes", lambda: 5e8)
     with ThreadPoolExecutor(4) as pool, pytest.raises(InputError, match="needed by 4 workers"):
-        distill(SETUP, executor=pool)
+        distill(SETUP, executor=pool, workers=4)
     distill(SETUP, certify=False)
+    with pytest.raises(InputError, match="workers = 0: at least 1 is needed"):
+        distill(SETUP, workers=0)
 
 
 def test_certificate_says_what_it_measured(monkeypatch: pytest.MonkeyPatch) -> None:

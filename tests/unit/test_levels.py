@@ -90,7 +90,7 @@ def test_bits_do_not_depend_on_workers_or_pieces() -> None:
     told: list[float] = []
     alone = level_study(setup, rungs, pieces=pieces, progress=lambda stage, part: told.append(part))
     with process_pool(2) as executor:
-        assert_same(alone, level_study(setup, rungs, executor=executor))
+        assert_same(alone, level_study(setup, rungs, executor=executor, workers=2))
     assert_same(alone, level_study(setup, rungs, pieces=pieces))
     assert told == sorted(told)
     assert told[0] == 0.0
@@ -178,6 +178,8 @@ def test_too_large_for_memory_is_said_before_work(monkeypatch: pytest.MonkeyPatc
     monkeypatch.setattr("levelnet.history.cost.available_memory_bytes", lambda: 2e9)
     with pytest.raises(InputError, match=r"n_max = 1000: about .* of memory needed"):
         level_study(level_setup(), (4, 6, 8, 1000))
+    with pytest.raises(InputError, match=r"n_max = 7: .* needed by 1000 workers, "):
+        level_study(level_setup(), (4, 5, 6, 7), workers=1000)
 
 
 def test_step_limit_is_a_failure_of_the_rung() -> None:
