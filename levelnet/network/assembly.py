@@ -28,6 +28,7 @@ from ..numerics.bordered import BorderedCholesky, BorderedLU, border_general, bo
 from .ladder import Ladder, line_groups
 from .line_rates import (
     KeptLines,
+    block_lines,
     half_angle_tables,
     kept_line_rates,
     log_line_rates,
@@ -35,7 +36,8 @@ from .line_rates import (
     shell_rates,
 )
 
-Solver = BlockCholesky | BlockLU | BorderedCholesky | BorderedLU
+SymmetricSolver = BlockCholesky | BorderedCholesky
+GeneralSolver = BlockLU | BorderedLU
 
 # sqrt(w) spans e^(1.51 eV / 2kT), which reaches e^320 here; doubles end at e^709 and products of
 # two such factors occur.
@@ -71,9 +73,21 @@ class FactoredInterior:
     kept_lines: tuple[KeptLines, ...]
     to_kept: FloatArray
     photoionization: FloatArray
-    solver: Solver
+    solver: SymmetricSolver | GeneralSolver
     diagonal: FloatArray
     log_root_weight: FloatArray
+
+    @property
+    def is_cold(self) -> bool:
+        """Whether weights leave the doubles, so that the symmetric form is not in use."""
+        return isinstance(self.solver, GeneralSolver)
+
+    @property
+    def weight(self) -> FloatArray:
+        """What turns a feed into populations, shape (n_unknowns,): w, and ones when cold."""
+        if self.is_cold:
+            return np.ones(len(self.log_root_weight))
+        return np.exp(2.0 * self.log_root_weight)
 
     def fates(self, rates: FloatArray) -> FloatArray:
         """Chance that an atom in each interior level leaves through `rates`.
@@ -88,21 +102,38 @@ class FactoredInterior:
         ndarray, shape (n_right, n_unknowns), dimensionless
             Probabilities; over all exits they sum to 1.
         """
-        if isinstance(self.solver, BlockLU | BorderedLU):
+        if self.is_cold:
             return self.solver.solve(rates)
         root = np.exp(self.log_root_weight)
         scale = np.sqrt(self.diagonal)
         chance: FloatArray = self.solver.solve(rates * (root / scale)) / (root * scale)
         return chance
 
+    def feed(self, source: FloatArray) -> FloatArray:
+        """Populations fed by `source`, over `weight`.
+
+        Parameters
+        ----------
+        source : ndarray, shape (n_right, n_unknowns), s^-1
+            What enters each interior level; 0 for those that are idle.
+
+        Returns
+        -------
+        ndarray, shape (n_right, n_unknowns)
+            x / weight, with A^T x = source.
+        """
+        if isinstance(self.solver, GeneralSolver):
+            return self.solver.solve_transposed(source)
+        return self.fates(source / self.weight)
+
     def log_populations(self, log_source: FloatArray) -> FloatArray:
         """Natural log of interior populations fed by exp(`log_source`), shape (n_unknowns,).
 
         Sources are per second; where a level has none, -inf.
         """
-        if isinstance(self.solver, BlockLU | BorderedLU):
+        if self.is_cold:
             top = log_source.max()
-            cold: FloatArray = self.solver.solve_transposed(np.exp(log_source - top)[None])[0]
+            cold = self.feed(np.exp(log_source - top)[None])[0]
             with np.errstate(divide="ignore"):
                 return np.asarray(top + np.log(cold))
         scaled = log_source - self.log_root_weight - 0.5 * np.log(self.diagonal)
@@ -191,7 +222,7 @@ def factor_interior(
     energy = ladder.levels.energy_ev[inside.position]
     weight = ladder.levels.statistical_weight[inside.position]
     log_root = 0.5 * (np.log(weight) - (energy - energy.min(initial=np.inf)) / kt)
-    solver: Solver
+    solver: SymmetricSolver | GeneralSolver
     if radiation_temperature_k < COLD_K:
         cold = _factor_cold(ladder, radiation_temperature_k, sink)
         solver, diagonal = cold, cold.diagonal
@@ -205,7 +236,7 @@ def factor_interior(
 
 def _factor_warm(
     ladder: Ladder, temperature_k: float, sink: FloatArray, log_root: FloatArray, work: Workspace
-) -> tuple[BlockCholesky | BorderedCholesky, FloatArray]:
+) -> tuple[SymmetricSolver, FloatArray]:
     root = np.exp(log_root)
     kt = const.BOLTZMANN_EV_K * temperature_k
     tables = half_angle_tables(ladder, kt)
@@ -234,36 +265,20 @@ def _factor_blocks(
     work: Workspace,
 ) -> tuple[BlockCholesky, FloatArray]:
     """Factor the blocks of levels resolved in l; what they lose to whole shells is in `sink`."""
-    inside = ladder.interior
-    blocks = slice(inside.shape.n_unknowns)
-    upward, downward, diagonal = np.empty((3, inside.shape.n_unknowns))
-    symmetric_blocks(
-        ladder.resolve_l_to,
-        inside.first_n,
-        ladder.dipole.strength_per_s,
-        ladder.dipole.offset,
-        *tables,
-        inside.shape.start,
-        inside.shape.coupling_start,
-        root,
-        ladder.energy_excess_ev[inside.position[blocks]] / kt_ev,
-        np.where(inside.idle[blocks], 0.0, 1.0),
-        sink,
-        upward,
-        downward,
-        diagonal,
-        work.coupling,
-    )
+    shape = ladder.interior.shape
+    upward, downward, diagonal = np.empty((3, shape.n_unknowns))
+    lines = block_lines(ladder, tables, root, kt_ev)
+    symmetric_blocks(*lines, sink, upward, downward, diagonal, work.coupling)
     if np.any(diagonal <= 0.0):
         raise SolveError(Outcome.SINGULAR.value)
     scale = np.sqrt(diagonal)
     solver = factor_symmetric(
-        inside.shape, work.coupling, root * scale, downward, sink * root / scale, work.factor
+        shape, work.coupling, root * scale, downward, sink * root / scale, work.factor
     )
     return solver, diagonal
 
 
-def _factor_cold(ladder: Ladder, temperature_k: float, sink: FloatArray) -> BlockLU | BorderedLU:
+def _factor_cold(ladder: Ladder, temperature_k: float, sink: FloatArray) -> GeneralSolver:
     upward, downward = rate_blocks(ladder, temperature_k)
     if not len(ladder.shells):
         return factor_general(ladder.interior.shape, upward, downward, sink)

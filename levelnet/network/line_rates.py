@@ -3,10 +3,11 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import NamedTuple
 
 import numpy as np
 
-from ..arrays import FloatArray
+from ..arrays import FloatArray, IntArray
 from ..atomic.levels import ionization_scale_ev
 from ..kernels import assembly
 from ..numerics.bordered import BorderRates
@@ -59,6 +60,57 @@ def log_line_rates(
     weight = ladder.levels.statistical_weight
     half_ratio = 0.5 * (np.log(weight[upper] / weight[lower]) - actual)
     return mean + half_ratio, mean - half_ratio
+
+
+class BlockLines(NamedTuple):
+    """Lines among the resolved interior levels at one T_r, as kernels take them, in their order.
+
+    The fields are those of :func:`levelnet.kernels.assembly.symmetric_blocks`.
+    """
+
+    top: int
+    first_n: IntArray
+    strength: FloatArray
+    strength_start: IntArray
+    geometric: FloatArray
+    stretch: FloatArray
+    start: IntArray
+    coupling_start: IntArray
+    root_weight: FloatArray
+    shift: FloatArray
+    live: FloatArray
+
+
+def block_lines(
+    ladder: Ladder, tables: tuple[FloatArray, FloatArray], root_weight: FloatArray, kt_ev: float
+) -> BlockLines:
+    """Collect the lines among resolved levels.
+
+    Parameters
+    ----------
+    ladder : Ladder
+        The atom.
+    tables : tuple of ndarray
+        Those of :func:`half_angle_tables`.
+    root_weight : ndarray, shape (n_unknowns,)
+        Square root of the Boltzmann weights of the blocks, whole shells not counted.
+    kt_ev : float, eV
+        k T_r.
+    """
+    inside = ladder.interior
+    blocks = slice(inside.shape.n_unknowns)
+    return BlockLines(
+        ladder.resolve_l_to,
+        inside.first_n,
+        ladder.dipole.strength_per_s,
+        ladder.dipole.offset,
+        *tables,
+        inside.shape.start,
+        inside.shape.coupling_start,
+        root_weight,
+        ladder.energy_excess_ev[inside.position[blocks]] / kt_ev,
+        np.where(inside.idle[blocks], 0.0, 1.0),
+    )
 
 
 def half_angle_tables(ladder: Ladder, kt_ev: float) -> tuple[FloatArray, FloatArray]:

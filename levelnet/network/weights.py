@@ -20,11 +20,9 @@ from .. import constants as const
 from ..arrays import FloatArray
 from ..atomic.bound_free import recombination_weights
 from ..kernels.assembly import geometric_means, pair_weights
-from ..numerics.block_lu import BlockLU
-from ..numerics.bordered import BorderedLU
 from .assembly import FactoredInterior, Workspace, factor_interior, rate_blocks
 from .ladder import Ladder
-from .line_rates import half_angle_tables, shell_means, shell_rates
+from .line_rates import block_lines, half_angle_tables, shell_means, shell_rates
 from .reduction import Node, Pairs, all_fates, log_exchange, log_spectrum
 from .transitions import line_places
 
@@ -83,13 +81,11 @@ def add_node_weights(
     for k, lines in enumerate(factored.kept_lines):
         source[:, :, lines.position] += kept.flow(k, lines.log_out)
     feed = _feed(factored, source[:, :, ladder.interior.position])
+    add_lines = _add_cold_lines if factored.is_cold else _add_lines
     total.bound_free[...] += np.einsum("ka,ska->sa", fates, captured)
     _add_photoionization(factored, fates, feed, total.bound_free)
     _add_kept_lines(factored, fates, kept, feed, total.bound_bound)
-    if isinstance(factored.solver, BlockLU | BorderedLU):
-        _add_cold_lines(factored, fates, feed, total.bound_bound)
-    else:
-        _add_lines(factored, fates, feed, total.bound_bound)
+    add_lines(factored, fates, feed, total.bound_bound)
 
 
 class _KeptFeed(NamedTuple):
@@ -132,29 +128,19 @@ def _captured(ladder: Ladder, temperature_k: float, by_spectrum: FloatArray) -> 
 
 
 def _feed(factored: FactoredInterior, source: FloatArray) -> FloatArray:
-    """Populations of the interior fed by `source`; over their weights where those are in use."""
+    """Populations of the interior fed by `source`, over their weights; idle levels take nothing."""
     if not source.shape[-1]:
         return source
     flat = source.reshape(-1, source.shape[-1]).copy()
     flat[:, factored.ladder.interior.idle] = 0.0
-    if isinstance(factored.solver, BlockLU | BorderedLU):
-        return factored.solver.solve_transposed(flat).reshape(source.shape)
-    weight = np.exp(2.0 * factored.log_root_weight)
-    return factored.fates(flat / weight).reshape(source.shape)
-
-
-def _weight(factored: FactoredInterior) -> FloatArray:
-    """What turns the feed into populations, shape (n_unknowns,)."""
-    if isinstance(factored.solver, BlockLU | BorderedLU):
-        return np.ones(len(factored.log_root_weight))
-    return np.exp(2.0 * factored.log_root_weight)
+    return factored.feed(flat).reshape(source.shape)
 
 
 def _add_photoionization(
     factored: FactoredInterior, fates: FloatArray, feed: FloatArray, out: FloatArray
 ) -> None:
     position = factored.ladder.interior.position
-    lost = feed * (_weight(factored) * factored.photoionization)
+    lost = feed * (factored.weight * factored.photoionization)
     out[:, position] -= np.einsum("ka,ska->sa", fates[:, position], lost)
 
 
@@ -168,7 +154,7 @@ def _add_kept_lines(
     """Lines with a kept level at one end or both."""
     ladder = factored.ladder
     populations = np.zeros((*feed.shape[:2], len(ladder.levels)))
-    populations[:, :, ladder.interior.position] = feed * _weight(factored)
+    populations[:, :, ladder.interior.position] = feed * factored.weight
     for k, lines in enumerate(factored.kept_lines):
         outward = kept.flow(k, lines.log_out)
         inward = populations[:, :, lines.position] * np.exp(lines.log_in)
@@ -194,27 +180,16 @@ def _add_lines(
     root = np.exp(factored.log_root_weight)
     upward, downward = np.empty((2, inside.shape.n_unknowns))
     coupling = np.empty(inside.shape.n_couplings)
-    layout = inside.first_n, ladder.dipole.offset, inside.shape.start, inside.shape.coupling_start
-    geometric_means(
-        ladder.resolve_l_to,
-        inside.first_n,
-        ladder.dipole.strength_per_s,
-        ladder.dipole.offset,
-        *tables,
-        inside.shape.start,
-        inside.shape.coupling_start,
-        root[blocks],
-        ladder.energy_excess_ev[inside.position[blocks]] / kt,
-        np.where(inside.idle[blocks], 0.0, 1.0),
-        upward,
-        downward,
-        coupling,
-    )
+    lines = block_lines(ladder, tables, root[blocks], kt)
+    geometric_means(*lines, upward, downward, coupling)
     fate = fates[:, inside.position]
     pair_weights(
-        ladder.resolve_l_to,
-        *layout,
-        root[blocks],
+        lines.top,
+        lines.first_n,
+        lines.strength_start,
+        lines.start,
+        lines.coupling_start,
+        lines.root_weight,
         coupling,
         np.ascontiguousarray(feed[:, :, blocks]),
         np.ascontiguousarray(fate[:, blocks]),

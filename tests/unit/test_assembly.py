@@ -173,6 +173,19 @@ def test_adjoint_identity(kelvin: float, seed: int) -> None:
     assert forward == pytest.approx(backward, rel=1e-12)
 
 
+@pytest.mark.parametrize("kelvin", [20.0, 40.0, 3000.0])
+def test_feed_times_weight_are_populations(kelvin: float) -> None:
+    # Closed form: x = weight * feed solves A^T x = source, as the populations do.
+    interior = factor_interior(hydrogen_ladder(9, "measured", GAP, 6), kelvin)
+    live = ~interior.ladder.interior.idle
+    source = np.random.default_rng(4).uniform(0.1, 1.0, len(live)) * live
+    assert interior.is_cold == (kelvin < COLD_K)
+    filled = (interior.feed(source[None])[0] * interior.weight)[live]
+    with np.errstate(divide="ignore"):
+        expected = np.exp(interior.log_populations(np.log(source)))[live]
+    np.testing.assert_allclose(filled, expected, rtol=1e-12)
+
+
 def test_lines_of_kept_levels_are_those_of_the_matrix() -> None:
     ladder = hydrogen_ladder(9, "measured", GAP)
     matrix = rate_matrix(ladder, 1500.0).toarray()
