@@ -148,9 +148,26 @@ class Cosmology:
         ----------
         Peebles 1993, Principles of Physical Cosmology, sec. 5 (from memory).
         """
-        law = self._law if self._table is None else self._table
+        law = self.law if self._table is None else self._table
         growth: Number = _growth(redshift)
         return law.rate_per_s(growth)
+
+    def unbounded_hubble_rate_per_s(self, growth: FloatArray) -> FloatArray:
+        """Expansion rate at any time, for integrals from the Big Bang on.
+
+        Parameters
+        ----------
+        growth : ndarray, any shape, dimensionless, 1 and above
+            1 + redshift, without upper limit.
+
+        Returns
+        -------
+        ndarray, same shape, s^-1
+            H; above a table as in `cosmic_time_s`.
+        """
+        if self._table is None:
+            return np.asarray(self.law.rate_per_s(growth))
+        return self._clock.rate_per_s(growth)
 
     def hubble_log_slope(self, redshift: Number) -> Number:
         """Logarithmic slope of the expansion rate, dln H/dln(1 + z).
@@ -165,7 +182,7 @@ class Cosmology:
         float or ndarray, same shape, dimensionless
             The derivative, not a difference: 2 for radiation alone, 3/2 for matter alone.
         """
-        law = self._law if self._table is None else self._table
+        law = self.law if self._table is None else self._table
         growth: Number = _growth(redshift)
         return law.log_slope(growth)
 
@@ -210,7 +227,7 @@ class Cosmology:
 
     def density_parameters(self) -> DensityParameters:
         """Densities today over the critical density (dimensionless)."""
-        law, scale = self._law, (self.hubble_km_s_mpc / 100.0) ** 2
+        law, scale = self.law, (self.hubble_km_s_mpc / 100.0) ** 2
         photons = photon_density_h2(self.cmb_temperature_k)
         massive = sum(density * energy_ratio(ratio) for density, ratio in law.massive)
         return DensityParameters(
@@ -267,7 +284,8 @@ class Cosmology:
         return shaped
 
     @cached_property
-    def _law(self) -> FriedmannLaw:
+    def law(self) -> FriedmannLaw:
+        """Friedmann's law of the parameters: densities and H^2, whatever table there is."""
         return friedmann_law(
             total_h2=(self.hubble_km_s_mpc / 100.0) ** 2,
             matter_h2=self.matter_density_h2,
@@ -287,8 +305,8 @@ class Cosmology:
     @cached_property
     def _clock(self) -> Clock:
         if self._table is None:
-            return law_clock(self._law)
-        return table_clock(self._law, self._table)
+            return law_clock(self.law)
+        return table_clock(self.law, self._table)
 
 
 def _growth(redshift: Any) -> Any:
@@ -372,7 +390,7 @@ def _check_table(table: ExpansionTable, hubble_km_s_mpc: float) -> None:
 
 def _check_budget(cosmology: Cosmology) -> None:
     growth = np.exp(np.linspace(0.0, math.log(1e5 + 1.0), 2000))
-    square = cosmology._law.square(growth)
+    square = cosmology.law.square(growth)
     if not np.all(square > 0.0):
         wrong = growth[np.argmin(square > 0.0)] - 1.0
         left = cosmology.density_parameters().dark_energy

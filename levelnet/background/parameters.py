@@ -72,7 +72,7 @@ def hubble_derivatives(cosmology: Cosmology, growth: FloatArray) -> FloatArray:
     result = np.zeros((len(growth), len(COSMOLOGICAL)))
     if cosmology.expansion_redshift is not None:
         return result
-    law = cosmology._law
+    law = cosmology.law
     dark = dataclasses.replace(law, dark_energy=1.0).dark_energy_h2(growth)
     h, curvature = cosmology.hubble_km_s_mpc / 100.0, cosmology.curvature_density
     result[:, 0] = 0.02 * h * ((1.0 - curvature) * dark + curvature * growth**2)
@@ -98,7 +98,7 @@ def _massive(
     The mass over T_nu falls as 1/T and as N_eff^(-1/4): as the power/4 of either.
     """
     total = np.zeros_like(growth)
-    for density, ratio in cosmology._law.massive:
+    for density, ratio in cosmology.law.massive:
         y, today = ratio / growth, np.array([ratio])
         early = energy_ratio(y) * (power - 0.25 * power * energy_ratio_slope(y)) * growth**4
         late = energy_ratio(today) * (power - 0.25 * power * energy_ratio_slope(today))

@@ -51,7 +51,7 @@ class Scattering:
         electrons_cm3[self.n_early :] *= ionized
         per_mpc = opacity_per_mpc(electrons_cm3, growth, thomson)
         # d eta = c ds/(a H).
-        rate = _hubble_rate_per_s(cosmology, growth)
+        rate = cosmology.unbounded_hubble_rate_per_s(growth)
         step_mpc = const.SPEED_OF_LIGHT_CM_S / const.CM_PER_MPC * growth / rate
         load = baryon_loading(cosmology) / growth
         shape = load**2 / (1.0 + load) + 16.0 / 15.0
@@ -198,10 +198,3 @@ def opacity_per_mpc(
     """
     cross_section_cm2 = const.THOMSON_CROSS_SECTION_CM2 * thomson
     return np.asarray(cross_section_cm2 * electrons_cm3 / growth * const.CM_PER_MPC)
-
-
-def _hubble_rate_per_s(cosmology: Cosmology, growth: FloatArray) -> FloatArray:
-    """H; above a tabulated expansion, Friedmann's law, as in the clock."""
-    if cosmology.expansion_redshift is None:
-        return np.asarray(cosmology._law.rate_per_s(growth))
-    return np.asarray(cosmology._clock.rate_per_s(growth))

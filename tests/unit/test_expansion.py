@@ -268,6 +268,20 @@ def test_times_of_a_table_join_the_parameters_above_it() -> None:
     assert table.conformal_time_mpc(z) == pytest.approx(PLAIN.conformal_time_mpc(z), rel=1e-9)
 
 
+def test_rate_without_limit_follows_the_table_and_then_the_parameters() -> None:
+    def faster_rate(z: Any) -> Any:
+        return 1.1 * PLAIN.hubble_rate_per_s(z)
+
+    faster = with_expansion(PLAIN, faster_rate, redshift_max=3000.0)
+    growth = np.array([[1.0, 9.0, 3001.0], [3001.5, 1e9, 1e12]])
+    law = PLAIN.unbounded_hubble_rate_per_s(growth)
+    assert law[:, :2] == pytest.approx(PLAIN.hubble_rate_per_s(growth[:, :2] - 1.0), rel=ROUND_OFF)
+    # Radiation alone, (1 + z)^2: matter adds 1.7e-6 at 1e9, omega_m/(2 omega_r) over 1 + z.
+    assert law[1, 2] / law[1, 1] == pytest.approx(1e6, rel=2e-6)
+    ratio = faster.unbounded_hubble_rate_per_s(growth) / law
+    assert ratio == pytest.approx(np.array([[1.1] * 3, [1.0] * 3]), rel=SPLINE)
+
+
 def test_inline_table_survives_the_setup_text() -> None:
     cosmology = with_expansion(PLAIN, PLAIN.hubble_rate_per_s)
     setup = Setup(cosmology=cosmology, hydrogen=Hydrogen(n_max=5))
