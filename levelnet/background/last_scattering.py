@@ -75,7 +75,7 @@ class Observed:
     gradient : ndarray, shape (n_observables, n_points)
         By ln x_e at each point of the quadrature, in these units: a weight vector, so that the
         observable changes by gradient @ (d ln x_e). x_e above the first point is held at 1.
-    by_parameter : ndarray, shape (n_observables, 6)
+    by_parameter : ndarray, shape (n_observables, n_parameters)
         By each of `COSMOLOGICAL`, per unit of each, at fixed x_e(s).
     by_thomson : ndarray, shape (n_observables,)
         By ln sigma_T, at fixed x_e(s).

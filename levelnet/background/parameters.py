@@ -20,7 +20,13 @@ COSMOLOGICAL = (
     "helium_mass_fraction",
     "effective_neutrinos",
 )
-"""Parameters by which derivatives are given; the others are held, dark energy closes the budget."""
+"""Parameters by which derivatives are given; the others are held, dark energy closes the budget.
+
+Their count is the n_parameters of shapes.
+"""
+
+# Their places, in this order.
+HUBBLE, BARYONS, MATTER, TEMPERATURE, HELIUM, NEUTRINOS = range(len(COSMOLOGICAL))
 
 
 def helium_mass_fraction(cosmology: Cosmology) -> float:
@@ -30,18 +36,18 @@ def helium_mass_fraction(cosmology: Cosmology) -> float:
 
 
 def hydrogen_derivatives(cosmology: Cosmology) -> FloatArray:
-    """D ln n_H by each of `COSMOLOGICAL`, shape (6,); the same at any redshift."""
+    """D ln n_H by each of `COSMOLOGICAL`, shape (n_parameters,); the same at any redshift."""
     result = np.zeros(len(COSMOLOGICAL))
-    result[1] = 1.0 / cosmology.baryon_density_h2
-    result[4] = -1.0 / (1.0 - helium_mass_fraction(cosmology))
+    result[BARYONS] = 1.0 / cosmology.baryon_density_h2
+    result[HELIUM] = -1.0 / (1.0 - helium_mass_fraction(cosmology))
     return result
 
 
 def helium_derivatives(cosmology: Cosmology) -> FloatArray:
-    """Df_He by each of `COSMOLOGICAL`, shape (6,)."""
+    """Df_He by each of `COSMOLOGICAL`, shape (n_parameters,)."""
     result = np.zeros(len(COSMOLOGICAL))
     left = 1.0 - helium_mass_fraction(cosmology)
-    result[4] = 1.0 / (const.HELIUM_HYDROGEN_MASS_RATIO * left**2)
+    result[HELIUM] = 1.0 / (const.HELIUM_HYDROGEN_MASS_RATIO * left**2)
     return result
 
 
@@ -52,15 +58,15 @@ def baryon_loading(cosmology: Cosmology) -> float:
 
 
 def loading_derivatives(cosmology: Cosmology) -> FloatArray:
-    """D ln R by each of `COSMOLOGICAL`, shape (6,); the same at any redshift."""
+    """D ln R by each of `COSMOLOGICAL`, shape (n_parameters,); the same at any redshift."""
     result = np.zeros(len(COSMOLOGICAL))
-    result[1] = 1.0 / cosmology.baryon_density_h2
-    result[3] = -4.0 / cosmology.cmb_temperature_k
+    result[BARYONS] = 1.0 / cosmology.baryon_density_h2
+    result[TEMPERATURE] = -4.0 / cosmology.cmb_temperature_k
     return result
 
 
 def hubble_derivatives(cosmology: Cosmology, growth: FloatArray) -> FloatArray:
-    """D ln H by each of `COSMOLOGICAL`, per unit of each, shape (n_growth, 6).
+    """D ln H by each of `COSMOLOGICAL`, per unit of each, shape (n_growth, n_parameters).
 
     Parameters
     ----------
@@ -75,18 +81,18 @@ def hubble_derivatives(cosmology: Cosmology, growth: FloatArray) -> FloatArray:
     law = cosmology.law
     dark = dataclasses.replace(law, dark_energy=1.0).dark_energy_h2(growth)
     h, curvature = cosmology.hubble_km_s_mpc / 100.0, cosmology.curvature_density
-    result[:, 0] = 0.02 * h * ((1.0 - curvature) * dark + curvature * growth**2)
-    result[:, 2] = growth**3 - dark
+    result[:, HUBBLE] = 0.02 * h * ((1.0 - curvature) * dark + curvature * growth**2)
+    result[:, MATTER] = growth**3 - dark
     radiation = growth**4 - dark
     photons = photon_density_h2(cosmology.cmb_temperature_k)
-    result[:, 3] = 4.0 * law.radiation * radiation + _massive(cosmology, growth, dark, 4.0)
-    result[:, 3] /= cosmology.cmb_temperature_k
+    warmer = 4.0 * law.radiation * radiation + _massive(cosmology, growth, dark, 4.0)
+    result[:, TEMPERATURE] = warmer / cosmology.cmb_temperature_k
     neff = cosmology.effective_neutrinos
     if neff > 0.0:
         massive = _massive(cosmology, growth, dark, 1.0)
-        result[:, 5] = ((law.radiation - photons) * radiation + massive) / neff
+        result[:, NEUTRINOS] = ((law.radiation - photons) * radiation + massive) / neff
     else:
-        result[:, 5] = NEUTRINO_PHOTON_RATIO * photons * radiation
+        result[:, NEUTRINOS] = NEUTRINO_PHOTON_RATIO * photons * radiation
     return result * (0.5 / law.square(growth))[:, None]
 
 

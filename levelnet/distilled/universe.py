@@ -12,7 +12,8 @@ from ..atomic.physics import Scales
 from ..background.cosmology import Cosmology
 from ..background.parameters import (
     COSMOLOGICAL,
-    helium_mass_fraction,
+    TEMPERATURE,
+    helium_derivatives,
     hubble_derivatives,
     hydrogen_derivatives,
 )
@@ -74,7 +75,7 @@ def make_universe(
 def make_drive(
     cosmology: Cosmology, scales: Scales, changes: tuple[float, float], n: int
 ) -> FloatArray:
-    """What each parameter does: the six cosmological, two constants, then `n` ln scale factors.
+    """What each parameter does: the cosmological, the constants, then `n` ln scale factors.
 
     Parameters
     ----------
@@ -88,15 +89,16 @@ def make_drive(
         Number of scale factors.
     """
     drive = np.zeros((len(COSMOLOGICAL) + len(CONSTANTS) + n, N_DRIVES))
+    background, constants, factors = np.split(drive, np.cumsum([len(COSMOLOGICAL), len(CONSTANTS)]))
     drive[:, DRIVE_SCALE] = -1.0
-    fraction = helium_mass_fraction(cosmology)
-    drive[: len(COSMOLOGICAL), DRIVE_DENSITY] = hydrogen_derivatives(cosmology)
-    drive[3, DRIVE_TEMPERATURE] = 1.0 / cosmology.cmb_temperature_k
-    drive[4, DRIVE_HELIUM] = 1.0 / (const.HELIUM_HYDROGEN_MASS_RATIO * (1.0 - fraction) ** 2)
+    background[:, DRIVE_DENSITY] = hydrogen_derivatives(cosmology)
+    background[:, DRIVE_HELIUM] = helium_derivatives(cosmology)
+    background[TEMPERATURE, DRIVE_TEMPERATURE] = 1.0 / cosmology.cmb_temperature_k
+    by_structure, by_mass = constants
     structure, mass = (1.0 / (1.0 + change) for change in changes)
-    drive[6, DRIVE_STRUCTURE], drive[6, DRIVE_COMPTON] = structure, 2.0 * structure
+    by_structure[DRIVE_STRUCTURE], by_structure[DRIVE_COMPTON] = structure, 2.0 * structure
     # The reduced mass grows less than the electron: d ln mu/d ln m_e = mu/m_e.
     ratio = scales.reduced_mass / (1.0 + changes[1]) / (1.0 + const.ELECTRON_PROTON_MASS_RATIO)
-    drive[7, DRIVE_MASS], drive[7, DRIVE_COMPTON] = mass * ratio, -3.0 * mass
-    drive[8:, DRIVE_SCALE] = np.arange(n)
+    by_mass[DRIVE_MASS], by_mass[DRIVE_COMPTON] = mass * ratio, -3.0 * mass
+    factors[:, DRIVE_SCALE] = np.arange(n)
     return drive

@@ -12,7 +12,7 @@ from scipy.interpolate import make_interp_spline
 
 from ..arrays import FloatArray
 from ..background.last_scattering import OBSERVABLES, Observed, observe
-from ..background.parameters import COSMOLOGICAL
+from ..background.parameters import COSMOLOGICAL, TEMPERATURE
 from ..background.quadrature import quadrature
 from ..constants import BOLTZMANN_EV_K
 from ..history.equations import Linearized, ionized_and_neutral
@@ -72,7 +72,7 @@ class Scalars:
         J.
     by_state : ndarray, shape (n_scalars, n_steps, 3, 2)
         dJ by the states at the stages.
-    by_parameter : ndarray, shape (n_scalars, 6)
+    by_parameter : ndarray, shape (n_scalars, n_parameters)
         dJ by each parameter of the cosmology, states held.
     lines : tuple of NetTransitions
         Line strengths among the scalars, which hang on the rates directly.
@@ -116,7 +116,7 @@ def _put_state(history: FrozenHistory, target: Target, k: int, made: Scalars) ->
     radiation_k = float(cosmology.radiation_temperature_k(target.redshift))
     made.value[k] = radiation_k * math.exp(float(state[1]))
     made.by_state[k, edge - 1, 2, 1] = made.value[k]
-    made.by_parameter[k, 3] = made.value[k] / cosmology.cmb_temperature_k
+    made.by_parameter[k, TEMPERATURE] = made.value[k] / cosmology.cmb_temperature_k
 
 
 def _put_observables(history: FrozenHistory, targets: Sequence[Target], made: Scalars) -> None:

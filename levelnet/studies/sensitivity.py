@@ -8,6 +8,7 @@ import numpy as np
 
 from ..arrays import FloatArray, IntArray
 from ..background.parameters import (
+    TEMPERATURE,
     helium_derivatives,
     hubble_derivatives,
     hydrogen_derivatives,
@@ -33,7 +34,7 @@ class StageRates:
         Of du/ds by ln of the escape rate of each line.
     compton : ndarray, shape (n_points,)
         Of dv/ds by ln of the Compton rate.
-    parameter : ndarray, shape (n_points, 2, 6)
+    parameter : ndarray, shape (n_points, 2, n_parameters)
         Of both by each parameter of the cosmology.
     """
 
@@ -65,7 +66,7 @@ def stage_rates(history: FrozenHistory) -> StageRates:
     electrons = np.array([c.electron_fraction for c in conditions])
     helium = 1.0 + history.setup.cosmology.helium_ratio() + electrons
     by_v = -_hubble(history) - helium_derivatives(history.setup.cosmology) / helium[:, None]
-    by_v[:, 3] += 4.0 / history.setup.cosmology.cmb_temperature_k
+    by_v[:, TEMPERATURE] += 4.0 / history.setup.cosmology.cmb_temperature_k
     upper = history.equations.lines.upper
     return StageRates(
         scale,
@@ -77,7 +78,7 @@ def stage_rates(history: FrozenHistory) -> StageRates:
 
 
 def line_parameters(history: FrozenHistory, line: NetTransitions) -> FloatArray:
-    """Derivative of a line's strength by each parameter at fixed states, shape (6,)."""
+    """Derivative of a line's strength by each parameter at fixed states, shape (n_parameters,)."""
     own = line.own_slope.tolist()
     slopes = [_by_background(s, o) for s, o in zip(line.slopes, own, strict=True)]
     summed: FloatArray = line.weight @ _by_parameter(history, np.array(slopes))
@@ -91,16 +92,16 @@ def _by_background(slopes: FlowSlopes, own_slope: float) -> tuple[float, float, 
 
 
 def _by_parameter(history: FrozenHistory, by_background: FloatArray) -> FloatArray:
-    """The same by each parameter, shape (n_points, 6)."""
+    """The same by each parameter, shape (n_points, n_parameters)."""
     cosmology = history.setup.cosmology
     result = by_background[:, 1, None] * hydrogen_derivatives(cosmology)
     result += by_background[:, 2, None] * _hubble(history)
-    result[:, 3] += by_background[:, 0] / cosmology.cmb_temperature_k
+    result[:, TEMPERATURE] += by_background[:, 0] / cosmology.cmb_temperature_k
     return np.asarray(result)
 
 
 def _hubble(history: FrozenHistory) -> FloatArray:
-    """D ln H by each parameter at every stage, shape (n_points, 6)."""
+    """D ln H by each parameter at every stage, shape (n_points, n_parameters)."""
     growth = np.exp(-history.solution.times.ravel())
     return hubble_derivatives(history.setup.cosmology, growth)
 
