@@ -40,7 +40,7 @@ def _fill(
 
 @kernel
 def geometric_means(
-    n_max: int,
+    top: int,
     first_n: IntArray,
     strength: FloatArray,
     strength_start: IntArray,
@@ -63,14 +63,14 @@ def geometric_means(
     n_blocks = first_n.shape[0]
     upward[:] = 0.0
     downward[:] = 0.0
-    relative, lean = np.empty(n_max + 1), np.empty(n_max + 1)
+    relative, lean = np.empty(top + 1), np.empty(top + 1)
     half = np.exp(-0.5 * shift)
     whole = 1.0 / half
     for l in range(n_blocks - 1):
-        low, columns = first_n[l + 1], n_max - l - 1
-        above = n_max + 1 - low
+        low, columns = first_n[l + 1], top - l - 1
+        above = top + 1 - low
         first = start[l + 1]
-        for n in range(first_n[l], n_max + 1):
+        for n in range(first_n[l], top + 1):
             i = start[l] + n - first_n[l]
             row = strength_start[l] + (n - l - 1) * columns + low - l - 2
             begin = coupling_start[l] + (n - first_n[l]) * above
@@ -103,7 +103,7 @@ def geometric_means(
 
 @kernel
 def symmetric_blocks(
-    n_max: int,
+    top: int,
     first_n: IntArray,
     strength: FloatArray,
     strength_start: IntArray,
@@ -122,24 +122,26 @@ def symmetric_blocks(
 ) -> None:
     """Fill the coupling buffer B, the total outflow D and the outflow to the block below.
 
-    Block l holds the levels n = first_n[l] .. n_max of angular momentum l; n_unknowns in all.
+    Block l holds the levels n = first_n[l] .. top of angular momentum l; n_unknowns in all. Whole
+    shells, above `top`, have no place here: what goes to them is in `sink`.
 
     Parameters
     ----------
-    n_max : int
-        Highest n.
-    first_n : ndarray of int, shape (n_max,)
+    top : int
+        Highest n resolved in l.
+    first_n : ndarray of int, shape (top,)
         Lowest n of each block.
     strength : ndarray
         A sqrt(g_u/g_l) in s^-1; block l at strength_start[l], rows n = l+1.., columns n' = l+2...
     strength_start, start, coupling_start : ndarray of int
         Where blocks begin in `strength`, in vectors, and in `coupling`.
     geometric, stretch : ndarray, shape (n_max + 1, n_max + 1)
-        1/(2 sinh(x/2)) and 1/(e^x - 1) by (n, n'), x the non-relativistic line energy over kT.
+        1/(2 sinh(x/2)) and 1/(e^x - 1) by (n, n'), x the non-relativistic line energy over kT;
+        n_max is the highest n of all, at least `top`.
     root_weight, shift, live, sink : ndarray, shape (n_unknowns,)
         Square root of the Boltzmann weight; energy above the non-relativistic one over kT; 0 for
-        a level that takes no part, else 1; outflow from the network in s^-1, positive where live
-        is 0.
+        a level that takes no part, else 1; outflow to kept levels, whole shells and the continuum
+        in s^-1, positive where live is 0.
     upward, downward : ndarray, shape (n_unknowns,)
         Work space; on exit `downward` is the outflow to block l - 1, scaled.
     diagonal : ndarray, shape (n_unknowns,)
@@ -149,7 +151,7 @@ def symmetric_blocks(
     """
     n_blocks = first_n.shape[0]
     geometric_means(
-        n_max,
+        top,
         first_n,
         strength,
         strength_start,
@@ -169,8 +171,8 @@ def symmetric_blocks(
         upward[i] = 1.0 / math.sqrt(diagonal[i])
         downward[i] *= upward[i]
     for l in range(n_blocks - 1):
-        above = n_max + 1 - first_n[l + 1]
-        for i in range(n_max + 1 - first_n[l]):
+        above = top + 1 - first_n[l + 1]
+        for i in range(top + 1 - first_n[l]):
             scale = upward[start[l] + i]
             begin = coupling_start[l] + i * above
             for j in range(above):
@@ -217,7 +219,7 @@ def shell_means(
 
 @kernel
 def pair_weights(
-    n_max: int,
+    top: int,
     first_n: IntArray,
     strength_start: IntArray,
     start: IntArray,
@@ -232,7 +234,7 @@ def pair_weights(
 
     Parameters
     ----------
-    n_max, first_n, strength_start, start, coupling_start, root_weight
+    top, first_n, strength_start, start, coupling_start, root_weight
         As for :func:`symmetric_blocks`.
     coupling : ndarray
         S, from :func:`geometric_means`: R_ij w_i = R_ji w_j = S times both root weights.
@@ -245,10 +247,10 @@ def pair_weights(
     """
     n_sets, n_kept = feed.shape[0], feed.shape[1]
     for l in range(first_n.shape[0] - 1):
-        low, columns = first_n[l + 1], n_max - l - 1
-        above = n_max + 1 - low
+        low, columns = first_n[l + 1], top - l - 1
+        above = top + 1 - low
         first = start[l + 1]
-        for n in range(first_n[l], n_max + 1):
+        for n in range(first_n[l], top + 1):
             i = start[l] + n - first_n[l]
             row = strength_start[l] + (n - l - 1) * columns + low - l - 2
             begin = coupling_start[l] + (n - first_n[l]) * above

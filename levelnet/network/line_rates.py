@@ -26,7 +26,7 @@ class KeptLines:
         ln of the rate from the kept level to the partner, and back, in s^-1.
     """
 
-    position: np.ndarray
+    position: IntArray
     log_out: FloatArray
     log_in: FloatArray
 
