@@ -11,6 +11,7 @@ from levelnet.errors import Outcome
 from levelnet.studies.budget_record import ErrorBudget
 from levelnet.studies.weighing import Weighing
 from tests.invented_history import invented_setup
+from tests.small_runs import small_setup
 
 PARAMETERS = ("hubble_km_s_mpc", "baryon_density_h2", "matter_density_h2", "cmb_temperature_k")
 UNITS = {"z_*": "1", "sound_horizon_mpc": "Mpc", "damping_per_mpc": "Mpc^-1"}
@@ -81,6 +82,30 @@ def invented_weighing(
         compton=1e-4 * by(count),
         parameter=by(count, len(PARAMETERS)),
         notes=("every number is INVENTED",),
+    )
+
+
+def plain_weighing() -> Weighing:
+    """Derivatives that a reader can add up by hand, of three targets."""
+    levels, targets = hydrogenic_levels(4), ("x_e(900)", "T_m(200)", "x_e(1100)")
+    upper, lower = dipole_pairs(levels)
+    return Weighing(
+        setup=small_setup(4, lines={"lyman_lines": 2}),
+        outcome=Outcome.CONVERGED,
+        targets=targets,
+        units=("1", "K", "1"),
+        value=np.array([0.02, 490.0, 0.14]),
+        levels=levels,
+        upper=upper,
+        lower=lower,
+        lines=("2p-1s", "3p-1s"),
+        parameters=("hubble_km_s_mpc",),
+        bound_bound=np.outer([1.0, -2.0, 0.5], np.arange(1.0, len(upper) + 1.0)),
+        bound_free=np.outer([-1.0, 1.0, 3.0], np.arange(len(levels)) / 10.0),
+        escape=np.array([[-0.25, -0.01], [0.1, 0.02], [-0.23, -0.03]]),
+        two_photon=np.array([-0.56, -0.04, -0.51]),
+        compton=np.array([1e-4, 0.5, 1e-6]),
+        parameter=np.zeros((len(targets), 1)),
     )
 
 

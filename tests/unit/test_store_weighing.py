@@ -27,6 +27,7 @@ from levelnet.store.schema import Content
 from levelnet.store.write import content_of, save
 from levelnet.studies.weighing import Weighing
 from tests.invented_weighing import band_targets, invented_budget, invented_weighing
+from tests.same_records import assert_same
 
 TARGETS = ("x_e(900)", "z_*")
 
@@ -50,22 +51,6 @@ CASES: dict[str, Callable[[], Weighing]] = {
         invented_weighing(TARGETS), value=np.array([np.nan, -0.0])
     ),
 }
-
-
-def assert_same(one: Any, other: Any) -> None:
-    """Equal in every field, arrays to the bit."""
-    assert type(one) is type(other)
-    for field in dataclasses.fields(one):
-        first, second = getattr(one, field.name), getattr(other, field.name)
-        if isinstance(first, np.ndarray):
-            assert first.dtype == second.dtype
-            assert first.shape == second.shape
-            assert first.tobytes() == second.tobytes(), field.name
-            assert not second.flags.writeable
-        elif dataclasses.is_dataclass(first) and field.name != "setup":
-            assert_same(first, second)
-        else:
-            assert first == second, field.name
 
 
 @pytest.fixture(scope="module")
