@@ -58,7 +58,8 @@ def invented_weighing(
     random = np.random.default_rng(20261201)
     levels = shell_levels(n_max, whole_from)
     upper, lower = dipole_pairs(levels)
-    lines = ("2p-1s", "3p-1s")
+    line_upper = np.flatnonzero((levels.l == 1) & (levels.n <= 3))
+    lines = tuple(f"{n}p-1s" for n in levels.n[line_upper])
 
     def by(*shape: int) -> np.ndarray:
         return scale * random.normal(0.0, 1.0, shape) * 10.0 ** random.uniform(-3.0, 0.0, shape)
@@ -74,6 +75,7 @@ def invented_weighing(
         upper=upper,
         lower=lower,
         lines=lines,
+        line_upper=line_upper,
         parameters=PARAMETERS,
         bound_bound=0.1 * by(count, len(upper)) * 4.0 / (levels.n[upper] * levels.n[lower]),
         bound_free=by(count, len(levels)) * (levels.n > 1) / levels.n**2.0,
@@ -99,6 +101,7 @@ def plain_weighing() -> Weighing:
         upper=upper,
         lower=lower,
         lines=("2p-1s", "3p-1s"),
+        line_upper=np.array([levels.index(2, 1), levels.index(3, 1)]),
         parameters=("hubble_km_s_mpc",),
         bound_bound=np.outer([1.0, -2.0, 0.5], np.arange(1.0, len(upper) + 1.0)),
         bound_free=np.outer([-1.0, 1.0, 3.0], np.arange(len(levels)) / 10.0),

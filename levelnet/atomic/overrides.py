@@ -11,7 +11,7 @@ import numpy as np
 from ..arrays import FloatArray, IntArray
 from ..errors import InputError
 from ..records import TUPLES, checked_record
-from .selection import AtomSize, Selector, line_mask
+from .selection import AtomSize, Selector, check_exists, line_mask
 from .selector_rows import (
     SELECTOR_COLUMNS,
     SelectorRow,
@@ -116,12 +116,7 @@ class Rates:
     def check(self, atom: AtomSize) -> None:
         """Raise InputError where a row selects nothing in this atom."""
         for one in self.table:
-            if not one.selector.exists_in(atom):
-                raise InputError(
-                    f'{one.where}: selector "{one.selector.text}" matches nothing in hydrogen with '
-                    f"n_max = {atom.n_max}, resolve_l_to = {atom.resolve_l_to} and "
-                    f"lyman_lines = {atom.lyman_lines}"
-                )
+            check_exists(one.selector, atom, one.where)
 
     @property
     def network(self) -> tuple[Override, ...]:

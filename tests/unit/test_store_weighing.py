@@ -45,7 +45,7 @@ CASES: dict[str, Callable[[], Weighing]] = {
     "no transition": lambda: invented_weighing(n_max=2),
     "no notes": lambda: dataclasses.replace(invented_weighing(TARGETS), notes=()),
     "no open line": lambda: dataclasses.replace(
-        invented_weighing(TARGETS), lines=(), escape=np.zeros((2, 0))
+        invented_weighing(TARGETS), lines=(), line_upper=np.zeros(0, int), escape=np.zeros((2, 0))
     ),
     "target not reached": lambda: dataclasses.replace(
         invented_weighing(TARGETS), value=np.array([np.nan, -0.0])
@@ -183,6 +183,10 @@ SPOILT: dict[str, tuple[Callable[[Content], None], str]] = {
     "short value": (with_values("weighing/value", lambda x: x[:1]), "damaged"),
     "upper too high": (with_values("weighing/upper", lambda x: x + 10**6), "upper: names levels"),
     "lower negative": (with_values("weighing/lower", lambda x: x - 10**6), "lower: names levels"),
+    "line too high": (
+        with_values("weighing/line_upper", lambda x: x + 10**6),
+        "line_upper: names levels",
+    ),
     "outcome": (with_attribute("outcome", "FINE"), 'outcome "FINE" is not known'),
     "setup": (with_attribute("setup", "not TOML ="), "stored setup: not valid TOML"),
     "newer": (with_attribute("layout_version", 2), "layout version 2 is newer than 1"),
