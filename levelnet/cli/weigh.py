@@ -133,8 +133,11 @@ def _check_places(
         from ..report.weights import figure_paths
 
         check_folder(options.plot)
+        from ..studies.targets import parse_target
+
         # The budget of x_e at several redshifts is drawn as a band.
-        band = not options.no_budget and sum(name.startswith("x_e(") for name in every) > 1
+        electrons = [name for name in every if parse_target(name).kind == "x_e"]
+        band = not options.no_budget and len(electrons) > 1
         check_free(figure_paths(targets, band, options.plot), options.force)
 
 

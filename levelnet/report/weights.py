@@ -9,7 +9,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from ..studies.groups import by_level, electron_rows, top_transitions
+from ..studies.groups import by_level, top_transitions
 from ..studies.weighing import Weighing
 from . import style
 from .budget import band_figure
@@ -100,7 +100,7 @@ def figure_paths(targets: Sequence[str], band: bool, folder: str | Path) -> tupl
 
 
 def _has_band(weighing: Weighing) -> bool:
-    return weighing.budget is not None and len(electron_rows(weighing.budget)[1]) > 1
+    return weighing.budget is not None and len(weighing.budget.band().redshift) > 1
 
 
 def file_names(targets: Sequence[str]) -> list[str]:

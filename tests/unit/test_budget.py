@@ -106,7 +106,8 @@ def test_the_band_holds_x_e_alone_in_descending_redshift(table) -> None:
     band = found.band()
     assert band.redshift.tolist() == [1100.0, 900.0]
     assert band.free_electron_fraction.tolist() == [0.14, 0.02]
-    np.testing.assert_allclose(band.sigma, [0.14 * 0.0051, 0.02 * 0.0056], rtol=1e-14)
+    np.testing.assert_allclose(band.sigma, [0.0051, 0.0056], rtol=1e-14)
+    np.testing.assert_allclose(band.contribution, [[-0.0051], [-0.0056]], rtol=1e-14)
 
 
 def test_arrays_are_read_only_and_shapes_checked(table) -> None:
