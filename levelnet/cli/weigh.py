@@ -9,7 +9,7 @@ from typing import TYPE_CHECKING
 
 from ..errors import InputError
 from .console import Console
-from .output import print_json, time_text
+from .output import print_result
 from .paths import check_folder, check_target
 from .solve import announce_cost, cache_pieces
 from .weigh_text import weighing_summary
@@ -93,14 +93,13 @@ def run(options: argparse.Namespace, console: Console) -> int:
     weighing = _weighed(setup, targets, band, options, console)
     seconds = time.monotonic() - start
     written = _write(weighing, options, console)
-    if options.json:
-        values = weighing_values(weighing, options.top)
-        print_json({**values, "written": written, "seconds": seconds})
-    else:
-        print(weighing_summary(weighing, options.top))
-        for path in written:
-            print(f"{'written':<22}{path}")
-        print(f"{'time':<22}{time_text(seconds)}")
+    print_result(
+        options.json,
+        lambda: weighing_values(weighing, options.top),
+        lambda: weighing_summary(weighing, options.top),
+        written=written,
+        seconds=seconds,
+    )
     if not weighing.outcome.ok:
         console.error(f"{weighing.outcome.name}: {weighing.outcome.value}", kind="")
         return 1
