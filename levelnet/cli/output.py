@@ -9,6 +9,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 from ..constants import SECONDS_PER_YEAR
+from ..quantities import OBSERVABLES
 
 if TYPE_CHECKING:
     from ..arrays import FloatArray
@@ -176,10 +177,14 @@ def _milestone_lines(history: History) -> list[str]:
     marks = history.milestones
     age = marks.last_scattering_time_s / SECONDS_PER_YEAR
     years = marks.transition_duration_s / SECONDS_PER_YEAR
+    last, peak, width = (
+        OBSERVABLES[name].label
+        for name in ("last_scattering_redshift", "visibility_peak_redshift", "visibility_width")
+    )
     lines = (
-        ("z_* (tau = 1)", marks.last_scattering_redshift, "{:.2f}", f"at {age:,.0f} years"),
-        ("visibility peak", marks.visibility_peak_redshift, "z = {:.2f}", "of g(eta)"),
-        ("visibility width", marks.visibility_width, "{:.2f}", "full width at half maximum in z"),
+        (last, marks.last_scattering_redshift, "{:.2f}", f"at {age:,.0f} years"),
+        (peak, marks.visibility_peak_redshift, "z = {:.2f}", "of g(eta)"),
+        (width, marks.visibility_width, "{:.2f}", "full width at half maximum in z"),
         ("half ionized", marks.half_ionized_redshift, "z = {:.2f}", "x_e = 0.5"),
         ("transition", years, "{:,.0f} years", "from x_e = 0.9 to 0.1"),
     )

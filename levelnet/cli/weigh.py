@@ -8,6 +8,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING
 
 from ..errors import InputError
+from ..quantities import known_targets
 from .console import Console
 from .output import print_result
 from .paths import check_folder, check_target
@@ -41,10 +42,9 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
         "--of",
         metavar="TARGET",
         action="append",
-        help="what to weigh, may be repeated: x_e(Z), T_m(Z), optical_depth(Z), line(3d-2p), z_*, "
-        "visibility_peak_redshift, visibility_width, last_scattering_time_s, r_s, k_D, z_drag, "
-        "r_drag (default: what the grid reaches of z_*, x_e(1100) and x_e(200), z_* if it ends at "
-        f"{_SCATTERED:g} or below; x_e at its middle if that is nothing)",
+        help=f"what to weigh, may be repeated: {known_targets()} (default: what the grid reaches "
+        f"of z_*, x_e(1100) and x_e(200), z_* if it ends at {_SCATTERED:g} or below; x_e at its "
+        "middle if that is nothing)",
     )
     parser.add_argument(
         "--uncertainties",

@@ -11,10 +11,12 @@ import pytest
 from matplotlib.figure import Figure
 
 from levelnet.errors import InputError
+from levelnet.quantities import OBSERVABLES
 from levelnet.report.budget import band_figure
 from levelnet.report.importance import importance_figure
 from levelnet.report.style import house_style, render
 from levelnet.report.weights import (
+    OBSERVABLE_SYMBOLS,
     draw_bars,
     figure_paths,
     file_names,
@@ -228,7 +230,14 @@ def test_file_names_are_plain_and_different() -> None:
     plain = file_names(names)
     assert plain == ["x_e-900", "line-3d-2p", "z", "x_e-20.5", "x_e-900-4"]
     assert target_label("x_e(900)") == "$x_e$($z$ = 900)"
+    assert target_label("optical_depth(1100.5)") == r"$\tau$($z$ = 1100.5)"
     assert target_label("line(3d-2p)") == "line(3d-2p)"
+
+
+def test_every_observable_has_a_symbol() -> None:
+    assert list(OBSERVABLE_SYMBOLS) == list(OBSERVABLES)
+    assert len(set(OBSERVABLE_SYMBOLS.values())) == len(OBSERVABLES)
+    assert target_label("k_D") == target_label("damping_per_mpc") == "$k_D$"
 
 
 def test_unknown_target_is_one_line() -> None:
