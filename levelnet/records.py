@@ -12,6 +12,7 @@ import json
 from collections.abc import Callable, Mapping
 from typing import Any, TypeVar, dataclass_transform
 
+import numpy as np
 from pydantic import BeforeValidator, ConfigDict, TypeAdapter, ValidationError, ValidationInfo
 from pydantic.dataclasses import dataclass as pydantic_dataclass
 
@@ -41,6 +42,20 @@ def checked_record(cls: type[T]) -> type[T]:
     return checked
 
 
+def as_tuples(value: object) -> object:
+    """Make tuples of lists and arrays, nested ones too: the strict check of a tuple refuses them.
+
+    Text brings lists, and so may a caller from Python.
+    """
+    if isinstance(value, np.ndarray):
+        value = value.tolist()
+    return tuple(as_tuples(one) for one in value) if isinstance(value, list | tuple) else value
+
+
+TUPLES = BeforeValidator(as_tuples)
+"""Mark of a field that holds tuples and may be given lists or arrays."""
+
+
 def from_mapping(cls: type) -> BeforeValidator:
     """Let a field that holds a `cls` also be given as a plain mapping from Python."""
 
@@ -49,7 +64,7 @@ def from_mapping(cls: type) -> BeforeValidator:
         if info.mode == "python" and isinstance(value, Mapping):
             return build(cls, value)
         if isinstance(value, Mapping):  # text has lists where records hold tuples
-            return {k: tuple(v) if isinstance(v, list) else v for k, v in value.items()}
+            return {k: as_tuples(v) for k, v in value.items()}
         return value
 
     return BeforeValidator(convert)

@@ -11,6 +11,7 @@ from levelnet.errors import Outcome
 from levelnet.studies.budget_record import ErrorBudget
 from levelnet.studies.weighing import Weighing
 from tests.invented_history import invented_setup
+from tests.small_runs import small_setup
 
 PARAMETERS = ("hubble_km_s_mpc", "baryon_density_h2", "matter_density_h2", "cmb_temperature_k")
 UNITS = {"z_*": "1", "sound_horizon_mpc": "Mpc", "damping_per_mpc": "Mpc^-1"}
@@ -57,7 +58,8 @@ def invented_weighing(
     random = np.random.default_rng(20261201)
     levels = shell_levels(n_max, whole_from)
     upper, lower = dipole_pairs(levels)
-    lines = ("2p-1s", "3p-1s")
+    line_upper = np.flatnonzero((levels.l == 1) & (levels.n <= 3))
+    lines = tuple(f"{n}p-1s" for n in levels.n[line_upper])
 
     def by(*shape: int) -> np.ndarray:
         return scale * random.normal(0.0, 1.0, shape) * 10.0 ** random.uniform(-3.0, 0.0, shape)
@@ -73,6 +75,7 @@ def invented_weighing(
         upper=upper,
         lower=lower,
         lines=lines,
+        line_upper=line_upper,
         parameters=PARAMETERS,
         bound_bound=0.1 * by(count, len(upper)) * 4.0 / (levels.n[upper] * levels.n[lower]),
         bound_free=by(count, len(levels)) * (levels.n > 1) / levels.n**2.0,
@@ -81,6 +84,31 @@ def invented_weighing(
         compton=1e-4 * by(count),
         parameter=by(count, len(PARAMETERS)),
         notes=("every number is INVENTED",),
+    )
+
+
+def plain_weighing() -> Weighing:
+    """Derivatives that a reader can add up by hand, of three targets."""
+    levels, targets = hydrogenic_levels(4), ("x_e(900)", "T_m(200)", "x_e(1100)")
+    upper, lower = dipole_pairs(levels)
+    return Weighing(
+        setup=small_setup(4, lines={"lyman_lines": 2}),
+        outcome=Outcome.CONVERGED,
+        targets=targets,
+        units=("1", "K", "1"),
+        value=np.array([0.02, 490.0, 0.14]),
+        levels=levels,
+        upper=upper,
+        lower=lower,
+        lines=("2p-1s", "3p-1s"),
+        line_upper=np.array([levels.index(2, 1), levels.index(3, 1)]),
+        parameters=("hubble_km_s_mpc",),
+        bound_bound=np.outer([1.0, -2.0, 0.5], np.arange(1.0, len(upper) + 1.0)),
+        bound_free=np.outer([-1.0, 1.0, 3.0], np.arange(len(levels)) / 10.0),
+        escape=np.array([[-0.25, -0.01], [0.1, 0.02], [-0.23, -0.03]]),
+        two_photon=np.array([-0.56, -0.04, -0.51]),
+        compton=np.array([1e-4, 0.5, 1e-6]),
+        parameter=np.zeros((len(targets), 1)),
     )
 
 

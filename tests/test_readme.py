@@ -10,7 +10,10 @@ from pathlib import Path
 import pytest
 
 import levelnet
+from levelnet.cli.main import build_parser
 from levelnet.history.setup import Setup, parse_setup
+from levelnet.store import DISTILLED_LAYOUT, LEVEL_LAYOUT, TABLE_LAYOUT, WEIGHING_LAYOUT
+from levelnet.store.layout import groups_of
 
 ROOT = Path(__file__).resolve().parents[1]
 README = (ROOT / "README.md").read_text(encoding="utf-8")
@@ -37,6 +40,36 @@ def test_start_has_two_commands_of_one_line() -> None:
     assert "levelnet demo" in blocks[0]
     assert "pytest" in blocks[1]
     assert len(re.findall("^```sh", README, re.M)) == 2
+
+
+def commands() -> list[str]:
+    """Give the words that the parser knows as commands."""
+    actions = build_parser()._actions
+    return [one for action in actions if action.metavar == "COMMAND" for one in action.choices]
+
+
+def test_every_command_has_a_row_and_no_other() -> None:
+    rows = re.findall(r"^\| `levelnet (\w+)", section("What you get"), re.M)
+    assert sorted(rows) == sorted(commands())
+    assert len(rows) > 5
+
+
+KINDS = {
+    "levelnet history": groups_of(("H I",)),  # helium has no levels yet
+    **{
+        kind.name: (*kind.required, *kind.optional)
+        for kind in (LEVEL_LAYOUT, WEIGHING_LAYOUT, TABLE_LAYOUT, DISTILLED_LAYOUT)
+    },
+}
+
+
+@pytest.mark.parametrize("kind", KINDS)
+def test_every_group_of_a_file_is_explained(kind: str) -> None:
+    """Some table of "Result file" has a row for each group of this kind of file, no other."""
+    wanted = {group.name for group in KINDS[kind]}
+    tables = section("Result file").split("| group | holds |")[1:]
+    found = [set(re.findall(r"^\| `(\w+)` \|", table.split("\n\n")[0], re.M)) for table in tables]
+    assert wanted in found
 
 
 def rows_of(part: str) -> dict[str, list[str]]:

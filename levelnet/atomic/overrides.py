@@ -7,12 +7,11 @@ from functools import lru_cache
 from typing import Annotated
 
 import numpy as np
-from pydantic import BeforeValidator
 
 from ..arrays import FloatArray, IntArray
 from ..errors import InputError
-from ..records import checked_record
-from .selection import AtomSize, Selector, line_mask
+from ..records import TUPLES, checked_record
+from .selection import AtomSize, Selector, check_exists, line_mask
 from .selector_rows import (
     SELECTOR_COLUMNS,
     SelectorRow,
@@ -66,11 +65,6 @@ class Override:
         return f"{self.selector.text} x {self.factor:.10g}"
 
 
-def _as_tuple(value: object) -> object:
-    # Arrays of a setup file arrive as lists, which the strict check of a tuple refuses.
-    return tuple(value) if isinstance(value, list) else value
-
-
 @checked_record
 class Rates:
     """Rates other than computed.
@@ -99,7 +93,7 @@ class Rates:
     """
 
     overrides: str | None = None
-    rows: Annotated[tuple[str, ...] | None, BeforeValidator(_as_tuple)] = None
+    rows: Annotated[tuple[str, ...] | None, TUPLES] = None
 
     def __post_init__(self) -> None:
         """Read the file and check every row."""
@@ -122,12 +116,7 @@ class Rates:
     def check(self, atom: AtomSize) -> None:
         """Raise InputError where a row selects nothing in this atom."""
         for one in self.table:
-            if not one.selector.exists_in(atom):
-                raise InputError(
-                    f'{one.where}: selector "{one.selector.text}" matches nothing in hydrogen with '
-                    f"n_max = {atom.n_max}, resolve_l_to = {atom.resolve_l_to} and "
-                    f"lyman_lines = {atom.lyman_lines}"
-                )
+            check_exists(one.selector, atom, one.where)
 
     @property
     def network(self) -> tuple[Override, ...]:

@@ -189,6 +189,16 @@ def parse_selector(process: str, upper: str, lower: str) -> Selector:
     return Selector(process, None, None, text)
 
 
+def check_exists(selector: Selector, atom: AtomSize, where: str) -> None:
+    """Raise InputError, which begins with `where`, if the atom has no rate that is selected."""
+    if not selector.exists_in(atom):
+        raise InputError(
+            f'{where}: selector "{selector.text}" matches nothing in hydrogen with '
+            f"n_max = {atom.n_max}, resolve_l_to = {atom.resolve_l_to} and "
+            f"lyman_lines = {atom.lyman_lines}"
+        )
+
+
 def level_mask(selector: Selector, levels: LevelSet) -> BoolArray:
     """Levels whose recombination and photoionization are selected, shape (n_levels,)."""
     if selector.process != "bound_free" or selector.upper is None:

@@ -8,12 +8,12 @@ from functools import cached_property
 from typing import Annotated, Any, NamedTuple
 
 import numpy as np
-from pydantic import BeforeValidator, Field
+from pydantic import Field
 
 from .. import constants as const
 from ..arrays import FloatArray
 from ..errors import AccuracyWarning, RangeError
-from ..records import checked_record
+from ..records import TUPLES, checked_record
 from .clock import Clock, law_clock, table_clock
 from .expansion import ExpansionTable, inline_table, read_expansion_table
 from .friedmann import (
@@ -33,16 +33,9 @@ EXPANSION_ERROR_LIMIT = 1e-4
 
 Density = Annotated[float, Field(gt=0.0, le=100.0)]
 Fraction = Annotated[float, Field(ge=0.0, lt=1.0)]
-
-
-def _as_tuple(value: object) -> object:
-    # Arrays of a setup file arrive as lists, which the strict check of a tuple refuses.
-    return tuple(value) if isinstance(value, list) else value
-
-
 Mass = Annotated[float, Field(ge=0.0, le=100.0)]
-Masses = Annotated[tuple[Mass, ...], Field(max_length=20), BeforeValidator(_as_tuple)]
-Column = Annotated[tuple[float, ...], BeforeValidator(_as_tuple)]
+Masses = Annotated[tuple[Mass, ...], Field(max_length=20), TUPLES]
+Column = Annotated[tuple[float, ...], TUPLES]
 
 
 class DensityParameters(NamedTuple):

@@ -35,6 +35,7 @@ import numpy as np
 
 from ..arrays import FloatArray, frozen_array
 from ..errors import InputError
+from ..quantities import OBSERVABLES, at_redshift
 from .cosmology import Cosmology
 from .parameters import (
     COSMOLOGICAL,
@@ -45,19 +46,6 @@ from .parameters import (
 from .quadrature import Quadrature
 from .scattering import DAMPING, DEPTH, SOUND, TIME, Event, Found, Scattering
 
-UNITS = {
-    "last_scattering_redshift": "1",
-    "visibility_peak_redshift": "1",
-    "visibility_width": "1",
-    "last_scattering_time_s": "s",
-    "sound_horizon_mpc": "Mpc",
-    "damping_per_mpc": "Mpc^-1",
-    "drag_redshift": "1",
-    "drag_horizon_mpc": "Mpc",
-}
-"""Unit of each observable; "1" where there is none, Mpc comoving."""
-OBSERVABLES = tuple(UNITS)
-"""Names of the observables, besides optical_depth(Z)."""
 # T_r from which integrals over a history may start: 1.4e-8 of hydrogen is neutral there.
 _IONIZED_K = 7000.0
 
@@ -69,7 +57,7 @@ class Observed:
     Attributes
     ----------
     names, units : tuple of str, length n_observables
-        As in `UNITS`, then "optical_depth(Z)".
+        As in :data:`levelnet.quantities.OBSERVABLES`, then "optical_depth(Z)".
     value : ndarray, shape (n_observables,)
         Values in these units.
     gradient : ndarray, shape (n_observables, n_points)
@@ -97,11 +85,6 @@ class Observed:
         frozen_array(self, "by_thomson", (n,))
 
 
-def at_redshift(quantity: str, redshift: float) -> str:
-    """Name of a quantity at a redshift (dimensionless): "x_e(900)", "optical_depth(1100.5)"."""
-    return f"{quantity}({repr(float(redshift)).removesuffix('.0')})"
-
-
 def ionized_redshift(cosmology: Cosmology) -> float:
     """Redshift (dimensionless) above which hydrogen is ionized to 1e-8: integrals start there."""
     return _IONIZED_K / cosmology.cmb_temperature_k - 1.0
@@ -113,7 +96,7 @@ def observe(
     electron_fraction: FloatArray,
     thomson: float = 1.0,
     optical_depth_to: Sequence[float] = (),
-    names: Sequence[str] = OBSERVABLES,
+    names: Sequence[str] = tuple(OBSERVABLES),
 ) -> Observed:
     """Observables of a history, with derivatives by x_e at every point.
 
@@ -131,7 +114,7 @@ def observe(
     optical_depth_to : sequence of float, dimensionless
         Redshifts Z for optical_depth(Z), from z_end up to Z; NaN outside the grid.
     names : sequence of str
-        Which of `OBSERVABLES`.
+        Which of :data:`levelnet.quantities.OBSERVABLES`.
 
     Raises
     ------
@@ -139,8 +122,9 @@ def observe(
         If an electron fraction is not positive and finite, their number is wrong, or a name is not
         known.
     """
-    if unknown := [name for name in names if name not in UNITS]:
-        raise InputError(f'observable "{unknown[0]}" is not known; known are {", ".join(UNITS)}')
+    if unknown := [name for name in names if name not in OBSERVABLES]:
+        known = ", ".join(OBSERVABLES)
+        raise InputError(f'observable "{unknown[0]}" is not known; known are {known}')
     ionized = np.asarray(electron_fraction, dtype=float)
     if ionized.shape != grid.points.shape or not np.all((ionized > 0.0) & np.isfinite(ionized)):
         raise InputError(f"electron_fraction: {len(grid.points)} positive numbers are needed")
@@ -158,7 +142,7 @@ def observe(
     depths = [at_redshift("optical_depth", z) for z in optical_depth_to]
     return Observed(
         (*names, *depths),
-        (*(UNITS[name] for name in names), *("1" for _ in depths)),
+        (*(OBSERVABLES[name].unit for name in names), *("1" for _ in depths)),
         value,
         change[:, 0, seen.n_early :],
         by_parameter,

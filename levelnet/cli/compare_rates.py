@@ -7,21 +7,15 @@ import math
 from typing import TYPE_CHECKING, Any
 
 from ..errors import InputError
+from ..quantities import OBSERVABLES
 from .output import aligned, sample_rows
 
 if TYPE_CHECKING:
     from ..history.result import History
     from ..history.setup import Setup
 
-# Names for readers; a milestone without one goes by its field.
-_LABELS = {
-    "last_scattering_redshift": "z_* (tau = 1)",
-    "visibility_peak_redshift": "visibility peak, z",
-    "visibility_width": "visibility width in z",
-    "half_ionized_redshift": "half ionized, z",
-    "last_scattering_time_s": "time at z_* (s)",
-    "transition_duration_s": "transition (s)",
-}
+# Milestones that are no observables.
+_LABELS = {"half_ionized_redshift": "half ionized", "transition_duration_s": "transition (s)"}
 
 
 def without_overrides(setup: Setup) -> Setup:
@@ -63,6 +57,13 @@ def _change(old: float, new: float) -> dict[str, float]:
     return {"old": old, "new": new, "relative_change": new / old - 1.0}
 
 
+def _label(milestone: str) -> str:
+    if milestone in _LABELS:
+        return _LABELS[milestone]
+    one = OBSERVABLES[milestone]
+    return one.label if one.unit == "1" else f"{one.label} ({one.unit})"
+
+
 def comparison_text(old: History, new: History) -> str:
     """Return the same as a table, old and new side by side."""
     values = comparison_values(old, new)
@@ -76,7 +77,7 @@ def comparison_text(old: History, new: History) -> str:
     for name, pair in values["milestones"].items():
         cells = (f"{pair['old']:.8g}", f"{pair['new']:.8g}", f"{pair['relative_change']:+.2e}")
         shown = cells if math.isfinite(pair["relative_change"]) else ("not reached", "", "")
-        lines.append((_LABELS.get(name, name), *shown))
+        lines.append((_label(name), *shown))
     heads = [f"  {one['rates']}: {one['source']}" for one in values["overrides"]]
     limit = f"changes below {new.setup.accuracy.relative:g} (accuracy.relative) are not resolved"
     tail = [] if old.outcome.ok else [f"old: {old.outcome.value}"]

@@ -8,7 +8,7 @@ from importlib.resources import files
 from pathlib import Path
 
 from .console import Console
-from .output import history_values, print_json, summary_text, time_text
+from .output import history_values, print_result, summary_text, time_text
 from .paths import check_folder
 from .solve import compute, finish
 
@@ -69,13 +69,12 @@ def run(options: argparse.Namespace, console: Console) -> int:
         figures = save_figures(history, folder, force=options.force, progress=progress)
     total = time.monotonic() - start
     written = [*texts, result_file, *figures]
-    if options.json:
-        more = {"invented": True, "written": written, "seconds": seconds, "total_seconds": total}
-        print_json({**history_values(history), **more})
-    else:
-        print(f"{_INVENTED}\n")
-        print(summary_text(history))
-        for path in written:
-            print(f"{'written':<22}{path}")
-        print(f"{'time':<22}{time_text(total)}, of it {time_text(seconds)} solving")
+    print_result(
+        options.json,
+        lambda: {**history_values(history), "invented": True, "total_seconds": total},
+        lambda: f"{_INVENTED}\n\n{summary_text(history)}",
+        written=written,
+        seconds=seconds,
+        time=f"{time_text(total)}, of it {time_text(seconds)} solving",
+    )
     return finish(history, console)

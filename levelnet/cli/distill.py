@@ -13,7 +13,7 @@ from typing import TYPE_CHECKING, Any
 
 from ..errors import InputError
 from .console import Console
-from .output import print_json, time_text
+from .output import print_result
 from .paths import check_target
 from .solve import cache_pieces
 from .table_output import table_summary, table_values
@@ -111,13 +111,13 @@ def run(options: argparse.Namespace, console: Console) -> int:
     seconds = time.monotonic() - start
     write(table, target, force=options.force)
     written = [target, *write_exports(table, target, languages, options.force)]
-    if options.json:
-        print_json({**table_values(table), "written": written, "seconds": seconds})
-    else:
-        print(table_summary(table))
-        for path in written:
-            print(f"{'written':<22}{path}")
-        print(f"{'time':<22}{time_text(seconds)}")
+    print_result(
+        options.json,
+        lambda: table_values(table),
+        lambda: table_summary(table),
+        written=written,
+        seconds=seconds,
+    )
     return 0
 
 

@@ -10,7 +10,7 @@ from typing import TYPE_CHECKING, Any
 
 from ..errors import InputError, RangeError
 from .console import Console
-from .output import print_json
+from .output import print_result
 from .paths import check_target
 from .table_output import distilled_summary, distilled_values
 
@@ -82,13 +82,12 @@ def run(options: argparse.Namespace, console: Console) -> int:
     written = _write(history, setup, options)
     if options.output == "-":
         return 0
-    if options.json:
-        print_json({**distilled_values(history, setup), "written": written})
-        return 0
-    print(setup.title or "(no title)")
-    print(distilled_summary(history))
-    for path in written:
-        print(f"{'written':<22}{path}")
+    print_result(
+        options.json,
+        lambda: distilled_values(history, setup),
+        lambda: f"{setup.title or '(no title)'}\n{distilled_summary(history)}",
+        written=written,
+    )
     return 0
 
 

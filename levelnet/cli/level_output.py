@@ -6,6 +6,7 @@ import dataclasses
 import math
 from typing import TYPE_CHECKING, Any
 
+from ..quantities import OBSERVABLES
 from .output import aligned, nearest_rows, row
 
 if TYPE_CHECKING:
@@ -136,16 +137,9 @@ def _demand_lines(study: LevelStudy, met: Demands) -> list[str]:
     return aligned([head, *body], right=True)
 
 
-_SHORT = {
-    "last_scattering_redshift": "z_*",
-    "visibility_peak_redshift": "peak of g",
-    "visibility_width": "width of g",
-    "last_scattering_time_s": "t at z_*",
-    "sound_horizon_mpc": "r_s",
-    "damping_per_mpc": "k_D",
-    "drag_redshift": "z_drag",
-    "drag_horizon_mpc": "r_drag",
-}
+def _short(name: str) -> str:
+    """Head of the column of an observable; an optical depth goes by its name."""
+    return OBSERVABLES[name].short if name in OBSERVABLES else name
 
 
 def _rung_lines(study: LevelStudy, found: Verdict) -> list[str]:
@@ -154,7 +148,7 @@ def _rung_lines(study: LevelStudy, found: Verdict) -> list[str]:
 
     from ..studies.verdict import population_changes, rung_errors
 
-    names = [_SHORT.get(name, name) for name in study.observable_names]
+    names = [_short(name) for name in study.observable_names]
     errors = study.rungs.observable / study.limit.observable.value - 1.0
     largest = rung_errors(study, found.low, found.high)
     populations = population_changes(study)
@@ -194,7 +188,7 @@ def _observable_lines(study: LevelStudy) -> list[str]:
     head = ("observable, all levels", "value", "error bar", "unit")
     body = [
         (
-            _SHORT.get(name, name),
+            _short(name),
             f"{value:.8g}" if math.isfinite(value) else "not reached",
             f"{value * bar:.1e}" if math.isfinite(value) else "-",
             "" if unit == "1" else unit,

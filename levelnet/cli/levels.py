@@ -12,7 +12,7 @@ from ..errors import InputError
 from .console import Console
 from .distill import worker_count, worker_processes
 from .level_output import level_summary, level_values
-from .output import print_json, size_text, time_text
+from .output import print_result, size_text, time_text
 from .paths import check_folder, check_target
 from .solve import cache_pieces
 
@@ -115,13 +115,13 @@ def run(options: argparse.Namespace, console: Console) -> int:
 
     write(study, target, force=options.force)
     written = [target, *save_figures(study, options.plot, options.force, console)]
-    if options.json:
-        print_json({**level_values(study, found, met), "written": written, "seconds": seconds})
-    else:
-        print(level_summary(study, found, met))
-        for path in written:
-            print(f"{'written':<22}{path}")
-        print(f"{'time':<22}{time_text(seconds)}")
+    print_result(
+        options.json,
+        lambda: level_values(study, found, met),
+        lambda: level_summary(study, found, met),
+        written=written,
+        seconds=seconds,
+    )
     if not study.outcome.ok:
         console.error(f"{study.outcome.name}: {study.outcome.value}", kind="")
         return 1

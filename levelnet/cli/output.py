@@ -4,10 +4,12 @@ from __future__ import annotations
 
 import json
 import math
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
+from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 from ..constants import SECONDS_PER_YEAR
+from ..quantities import OBSERVABLES
 
 if TYPE_CHECKING:
     from ..arrays import FloatArray
@@ -16,6 +18,46 @@ if TYPE_CHECKING:
 
 _SAMPLES = (1700.0, 1400.0, 1300.0, 1200.0, 1100.0, 1000.0, 800.0, 500.0, 200.0, 100.0, 50.0, 20.0)
 _CHANNELS_SHOWN = 6
+
+
+def print_result(
+    as_json: bool,
+    values: Callable[[], dict[str, Any]],
+    text: Callable[[], str],
+    *,
+    file: Path | None = None,
+    written: Sequence[Path] | None = None,
+    seconds: float | None = None,
+    time: str = "",
+) -> None:
+    """Print a result for programs or for people, with its file, what was written and the time.
+
+    Parameters
+    ----------
+    as_json : bool
+        JSON in place of text.
+    values, text : callable
+        Give the one and the other; only one of them is called.
+    file : Path or None
+        Where the result is.
+    written : sequence of Path or None
+        Files that the command made beside it.
+    seconds : float or None, s
+        How long the work took.
+    time : str
+        What people are told in place of `seconds`.
+    """
+    if as_json:
+        more = {"file": file, "written": written, "seconds": seconds}
+        print_json(values() | {name: one for name, one in more.items() if one is not None})
+        return
+    print(text())
+    rows = [] if file is None else [("file", str(file))]
+    rows += [("written", str(path)) for path in written or ()]
+    if seconds is not None:
+        rows.append(("time", time or time_text(seconds)))
+    for label, said in rows:
+        print(row(label, said))
 
 
 def print_json(values: object) -> None:
@@ -135,10 +177,14 @@ def _milestone_lines(history: History) -> list[str]:
     marks = history.milestones
     age = marks.last_scattering_time_s / SECONDS_PER_YEAR
     years = marks.transition_duration_s / SECONDS_PER_YEAR
+    last, peak, width = (
+        OBSERVABLES[name].label
+        for name in ("last_scattering_redshift", "visibility_peak_redshift", "visibility_width")
+    )
     lines = (
-        ("z_* (tau = 1)", marks.last_scattering_redshift, "{:.2f}", f"at {age:,.0f} years"),
-        ("visibility peak", marks.visibility_peak_redshift, "z = {:.2f}", "of g(eta)"),
-        ("visibility width", marks.visibility_width, "{:.2f}", "full width at half maximum in z"),
+        (last, marks.last_scattering_redshift, "{:.2f}", f"at {age:,.0f} years"),
+        (peak, marks.visibility_peak_redshift, "z = {:.2f}", "of g(eta)"),
+        (width, marks.visibility_width, "{:.2f}", "full width at half maximum in z"),
         ("half ionized", marks.half_ionized_redshift, "z = {:.2f}", "x_e = 0.5"),
         ("transition", years, "{:,.0f} years", "from x_e = 0.9 to 0.1"),
     )

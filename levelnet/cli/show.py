@@ -4,13 +4,14 @@ from __future__ import annotations
 
 import argparse
 import sys
+from collections.abc import Callable
 from pathlib import Path
 from typing import TYPE_CHECKING, TextIO
 
 from ..errors import InputError
 from .console import Console
 from .distill import LANGUAGES
-from .output import history_values, print_json, summary_text
+from .output import history_values, print_result, summary_text
 from .paths import check_folder, check_target
 
 if TYPE_CHECKING:
@@ -75,31 +76,52 @@ def run(options: argparse.Namespace, console: Console) -> int:
     _place_output(options)
     folder = _checked_places(options)
 
-    from ..history.result import History
     from ..store import read
+
+    record = read(options.file)
+    _screens()[type(record)](record, folder, options, console)
+    return 0
+
+
+def _screens() -> dict[type, Callable[..., None]]:
+    """What shows a record, by its type."""
+    from ..distilled.history import FastHistory
+    from ..distilled.table import EffectiveTable
+    from ..history.result import History
     from ..studies.level_records import LevelStudy
     from ..studies.weighing import Weighing
-    from .show_table import show_distilled, show_levels
+    from .show_table import show_distilled, show_levels, show_table
     from .show_weighing import show_weighing
 
-    history = read(options.file)
-    if isinstance(history, Weighing):
-        return show_weighing(history, folder, options, console)
-    if isinstance(history, LevelStudy):
-        return show_levels(history, folder, options, console)
-    if not isinstance(history, History):
-        return show_distilled(history, folder, options, console)
+    return {
+        History: _show_history,
+        EffectiveTable: show_table,
+        FastHistory: show_distilled,
+        Weighing: show_weighing,
+        LevelStudy: show_levels,
+    }
+
+
+def _show_history(
+    history: History, folder: Path | None, options: argparse.Namespace, console: Console
+) -> None:
+    """Print the summary of a history; draw it, write its table."""
     if options.export:
         raise InputError("--export: writes tables of effective rates, but the file holds a history")
     written = _save_figures(history, folder, options, console)
     if options.csv == "-":
         _write_table(history, sys.stdout, options)
-    else:
-        if options.csv is not None:
-            _write_table(history, Path(options.csv), options)
-            written.append(Path(options.csv))
-        _print_summary(history, written, options)
-    return 0
+        return
+    if options.csv is not None:
+        _write_table(history, Path(options.csv), options)
+        written.append(Path(options.csv))
+    print_result(
+        options.json,
+        lambda: history_values(history),
+        lambda: summary_text(history),
+        file=options.file,
+        written=written,
+    )
 
 
 def _place_output(options: argparse.Namespace) -> None:
@@ -146,13 +168,3 @@ def _write_table(history: History, target: Path | TextIO, options: argparse.Name
     from ..store import write_csv
 
     write_csv(history, target, ascending=options.ascending, force=options.force)
-
-
-def _print_summary(history: History, written: list[Path], options: argparse.Namespace) -> None:
-    if options.json:
-        print_json({**history_values(history), "file": options.file, "written": written})
-        return
-    print(summary_text(history))
-    print(f"{'file':<22}{options.file}")
-    for path in written:
-        print(f"{'written':<22}{path}")

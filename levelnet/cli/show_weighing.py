@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING
 
 from ..errors import InputError
 from .console import Console
-from .output import print_json
+from .output import print_result
 from .weigh_text import weighing_summary
 from .weigh_values import weighing_values
 
@@ -20,7 +20,7 @@ _TOP = 10
 
 def show_weighing(
     weighing: Weighing, folder: Path | None, options: argparse.Namespace, console: Console
-) -> int:
+) -> None:
     """Print the summary and draw the figures if asked for."""
     for name in ("redshift", "csv", "export"):
         if getattr(options, name) is not None:
@@ -31,12 +31,10 @@ def show_weighing(
 
         with console.progress() as progress:
             written += save_weighing_figures(weighing, folder, options.force, progress)
-    if options.json:
-        values = weighing_values(weighing, _TOP)
-        print_json({**values, "file": options.file, "written": written})
-        return 0
-    print(weighing_summary(weighing, _TOP))
-    print(f"{'file':<22}{options.file}")
-    for path in written:
-        print(f"{'written':<22}{path}")
-    return 0
+    print_result(
+        options.json,
+        lambda: weighing_values(weighing, _TOP),
+        lambda: weighing_summary(weighing, _TOP),
+        file=options.file,
+        written=written,
+    )

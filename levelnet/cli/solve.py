@@ -13,7 +13,7 @@ from typing import TYPE_CHECKING, Any
 from ..errors import AccuracyWarning, Outcome
 from .compare_rates import comparison_text, comparison_values, without_overrides
 from .console import Console
-from .output import history_values, print_json, size_text, summary_text, time_text
+from .output import history_values, print_json, print_result, size_text, summary_text, time_text
 from .paths import check_target
 
 if TYPE_CHECKING:
@@ -79,15 +79,19 @@ def run(options: argparse.Namespace, console: Console) -> int:
     from ..store import write
 
     write(history, target, force=options.force)
-    if options.json:
-        values = {**history_values(history), "file": target, "seconds": seconds}
-        compared = {} if old is None else {"compare_rates": comparison_values(old, history)}
-        print_json(values | compared)
-    else:
-        print(summary_text(history))
-        print(f"{'file':<22}{target} (solved in {time_text(seconds)})")
-        if old is not None:
-            print(f"\n{comparison_text(old, history)}")
+    print_result(
+        options.json,
+        lambda: (
+            history_values(history)
+            | ({} if old is None else {"compare_rates": comparison_values(old, history)})
+        ),
+        lambda: (
+            summary_text(history)
+            + ("" if old is None else f"\n\n{comparison_text(old, history)}\n")
+        ),
+        file=target,
+        seconds=seconds,
+    )
     return finish(history, console)
 
 

@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 from typing import TYPE_CHECKING, Any
 
+from ..quantities import OBSERVABLES
 from .output import aligned, atom_size, row
 
 if TYPE_CHECKING:
@@ -146,11 +147,12 @@ def distilled_summary(history: FastHistory) -> str:
     seen = history.observables
     lines = [row("outcome", history.outcome.value)]
     if seen is not None:
-        for label, value, form in (
-            ("z_* (tau = 1)", seen.last_scattering_redshift, "{:.3f}"),
-            ("sound horizon r_s", seen.sound_horizon_mpc, "{:.3f} Mpc (comoving)"),
-            ("damping k_D", seen.damping_per_mpc, "{:.6f} per Mpc (comoving)"),
+        for name, form in (
+            ("last_scattering_redshift", "{:.3f}"),
+            ("sound_horizon_mpc", "{:.3f} Mpc (comoving)"),
+            ("damping_per_mpc", "{:.6f} per Mpc (comoving)"),
         ):
+            label, value = OBSERVABLES[name].label, getattr(seen, name)
             lines.append(row(label, form.format(value) if math.isfinite(value) else "not reached"))
     head = ("z", "x_e", "x_HI", "T_m (K)", "T_r (K)")
     body = [

@@ -8,8 +8,9 @@ from pathlib import Path
 from typing import TYPE_CHECKING
 
 from ..errors import InputError
+from ..quantities import known_targets
 from .console import Console
-from .output import print_json, time_text
+from .output import print_result
 from .paths import check_folder, check_target
 from .solve import announce_cost, cache_pieces
 from .weigh_text import weighing_summary
@@ -41,10 +42,9 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
         "--of",
         metavar="TARGET",
         action="append",
-        help="what to weigh, may be repeated: x_e(Z), T_m(Z), optical_depth(Z), line(3d-2p), z_*, "
-        "visibility_peak_redshift, visibility_width, last_scattering_time_s, r_s, k_D, z_drag, "
-        "r_drag (default: what the grid reaches of z_*, x_e(1100) and x_e(200), z_* if it ends at "
-        f"{_SCATTERED:g} or below; x_e at its middle if that is nothing)",
+        help=f"what to weigh, may be repeated: {known_targets()} (default: what the grid reaches "
+        f"of z_*, x_e(1100) and x_e(200), z_* if it ends at {_SCATTERED:g} or below; x_e at its "
+        "middle if that is nothing)",
     )
     parser.add_argument(
         "--uncertainties",
@@ -93,14 +93,13 @@ def run(options: argparse.Namespace, console: Console) -> int:
     weighing = _weighed(setup, targets, band, options, console)
     seconds = time.monotonic() - start
     written = _write(weighing, options, console)
-    if options.json:
-        values = weighing_values(weighing, options.top)
-        print_json({**values, "written": written, "seconds": seconds})
-    else:
-        print(weighing_summary(weighing, options.top))
-        for path in written:
-            print(f"{'written':<22}{path}")
-        print(f"{'time':<22}{time_text(seconds)}")
+    print_result(
+        options.json,
+        lambda: weighing_values(weighing, options.top),
+        lambda: weighing_summary(weighing, options.top),
+        written=written,
+        seconds=seconds,
+    )
     if not weighing.outcome.ok:
         console.error(f"{weighing.outcome.name}: {weighing.outcome.value}", kind="")
         return 1
@@ -133,8 +132,11 @@ def _check_places(
         from ..report.weights import figure_paths
 
         check_folder(options.plot)
+        from ..studies.targets import parse_target
+
         # The budget of x_e at several redshifts is drawn as a band.
-        band = not options.no_budget and sum(name.startswith("x_e(") for name in every) > 1
+        electrons = [name for name in every if parse_target(name).kind == "x_e"]
+        band = not options.no_budget and len(electrons) > 1
         check_free(figure_paths(targets, band, options.plot), options.force)
 
 

@@ -80,15 +80,13 @@ def band_values(weighing: Weighing) -> dict[str, Any] | None:
     budget = weighing.budget
     if budget is None:
         return None
-    from ..studies.groups import electron_rows
-
-    redshift, rows = electron_rows(budget)
-    if len(rows) < 2:
+    band = budget.band()
+    if len(band.redshift) < 2:
         return None
-    parts = budget.contribution[rows].T
+    parts = band.contribution[::-1].T
     return {
-        "redshift": redshift,
-        "free_electron_fraction": budget.value[rows],
-        "sigma": budget.sigma[rows],
+        "redshift": band.redshift[::-1],
+        "free_electron_fraction": band.free_electron_fraction[::-1],
+        "sigma": band.sigma[::-1],
         "contributions": dict(zip(budget.groups, parts, strict=True)),
     }

@@ -2,13 +2,13 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from typing import TYPE_CHECKING
 
 import numpy as np
 
 from ..arrays import FloatArray
 from ..studies.budget_record import ErrorBudget
-from ..studies.groups import electron_rows
 from . import style
 
 if TYPE_CHECKING:
@@ -33,9 +33,9 @@ def band_figure(budget: ErrorBudget) -> Figure:
         of the same, logarithmic. Groups are ranked by their largest contribution; those beyond six
         are added in quadrature.
     """
-    redshift, rows = electron_rows(budget)
-    sigma = 100.0 * budget.sigma[rows]
-    curves = _ranked_curves(budget, rows)
+    band = budget.band()
+    redshift, sigma = band.redshift, 100.0 * band.sigma
+    curves = _ranked_curves(budget.groups, band.contribution)
     with style.house_style():
         figure = style.new_figure(style.TWO_COLUMNS_IN, 3.4)
         left, right = figure.subplots(1, 2, sharex=True)
@@ -50,7 +50,7 @@ def band_figure(budget: ErrorBudget) -> Figure:
             right.plot(redshift, _seen(100.0 * values), label=None if signed else name, **look)
         right.set_yscale("log")
         for axes, letter in ((left, "a"), (right, "b")):
-            axes.set_xlim(float(redshift[0]), float(redshift[-1]))
+            axes.set_xlim(float(redshift[-1]), float(redshift[0]))
             axes.set_xlabel(r"redshift $z$")
             style.panel_letter(axes, letter)
         left.set_ylabel(r"$\Delta x_e/x_e$ (per cent)")
@@ -66,12 +66,13 @@ def band_figure(budget: ErrorBudget) -> Figure:
     return figure
 
 
-def _ranked_curves(budget: ErrorBudget, rows: list[int]) -> list[tuple[str, FloatArray, bool]]:
+def _ranked_curves(
+    groups: Sequence[str], contribution: FloatArray
+) -> list[tuple[str, FloatArray, bool]]:
     """Curves to draw: name, contribution, and whether it has a sign: a sum of squares has not."""
-    contribution = budget.contribution[rows]
     size = np.max(np.abs(contribution), axis=0, initial=0.0)
     order = [int(k) for k in np.argsort(-size, kind="stable") if size[k] > 0.0]
-    curves = [(budget.groups[k], contribution[:, k], True) for k in order[:_CURVES]]
+    curves = [(groups[k], contribution[:, k], True) for k in order[:_CURVES]]
     rest = order[_CURVES:]
     if rest:
         together = np.sqrt(np.sum(contribution[:, rest] ** 2, axis=1))

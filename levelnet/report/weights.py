@@ -9,7 +9,9 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from ..studies.groups import by_level, electron_rows, top_transitions
+from ..quantities import AT_REDSHIFT
+from ..studies.groups import by_level, top_transitions
+from ..studies.targets import parse_target
 from ..studies.weighing import Weighing
 from . import style
 from .budget import band_figure
@@ -43,14 +45,17 @@ _PROCESSES = {
     "escape": "Lyman escape",
     "compton": "Compton",
 }
-_TARGETS = {
+OBSERVABLE_SYMBOLS = {
     "last_scattering_redshift": "$z_*$",
-    "z_*": "$z_*$",
-    "drag_redshift": r"$z_{\mathrm{drag}}$",
+    "visibility_peak_redshift": r"$z_{\mathrm{peak}}$",
+    "visibility_width": r"$\Delta z_{\mathrm{FWHM}}$",
+    "last_scattering_time_s": "$t(z_*)$",
     "sound_horizon_mpc": "$r_s$",
     "damping_per_mpc": "$k_D$",
+    "drag_redshift": r"$z_{\mathrm{drag}}$",
     "drag_horizon_mpc": r"$r_{\mathrm{drag}}$",
 }
+"""Every observable as it stands in a paper."""
 
 
 def save_weighing_figures(
@@ -100,7 +105,7 @@ def figure_paths(targets: Sequence[str], band: bool, folder: str | Path) -> tupl
 
 
 def _has_band(weighing: Weighing) -> bool:
-    return weighing.budget is not None and len(electron_rows(weighing.budget)[1]) > 1
+    return weighing.budget is not None and len(weighing.budget.band().redshift) > 1
 
 
 def file_names(targets: Sequence[str]) -> list[str]:
@@ -114,11 +119,11 @@ def file_names(targets: Sequence[str]) -> list[str]:
 
 def target_label(target: str) -> str:
     """Write a target as it stands in a paper."""
-    if match := re.fullmatch(r"(x_e|T_m)\((.+)\)", target):
-        return rf"${match[1]}$($z$ = {match[2]})"
-    if match := re.fullmatch(r"optical_depth\((.+)\)", target):
-        return rf"$\tau$($z$ = {match[1]})"
-    return _TARGETS.get(target, target.replace("_", " "))
+    one = parse_target(target)
+    if one.kind in AT_REDSHIFT:
+        symbol = r"\tau" if one.kind == "optical_depth" else one.kind
+        return rf"${symbol}$($z$ = {one.redshift:.10g})"
+    return OBSERVABLE_SYMBOLS.get(one.name, one.name)
 
 
 def ranking_figure(weighing: Weighing, target: str) -> Figure:

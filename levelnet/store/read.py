@@ -207,7 +207,7 @@ def weighing_of(content: Content) -> Weighing:
 
     parts = _all_fields(content, WEIGHING_LAYOUT)
     levels = LevelSet(**parts.pop("levels"))
-    for name in ("upper", "lower"):
+    for name in ("upper", "lower", "line_upper"):
         if len(parts[name]) and not 0 <= parts[name].min() <= parts[name].max() < len(levels):
             raise FileFormatError(f"{name}: names levels that are not in the file")
     budget = parts.pop("budget", None)

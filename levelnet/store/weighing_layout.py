@@ -16,9 +16,8 @@ def _level(name: str, units: str, long_name: str, kind: Kind = "float64") -> Var
     return Variable(name, ("level",), units, long_name, field, kind, coordinates)
 
 
-def _end(name: str) -> Variable:
-    text = f"position of the {name} level of the dipole transition"
-    return Variable(name, ("transition",), "1", text, name, "int64")
+def _end(name: str, over: str, long_name: str) -> Variable:
+    return Variable(name, (over,), "1", f"position of the {long_name}", name, "int64")
 
 
 def _value(field: str) -> Variable:
@@ -54,9 +53,10 @@ WEIGHING = Group(
         _level("energy", "eV", "energy above the ground state"),
         _level("ionization_energy", "eV", "energy that ionizes the level"),
         _position("transition", "position of the dipole transition, from 0"),
-        _end("upper"),
-        _end("lower"),
+        _end("upper", "transition", "upper level of the dipole transition"),
+        _end("lower", "transition", "lower level of the dipole transition"),
         _text("line", "line", "line to the ground state whose photons escape", "lines"),
+        _end("line_upper", "line", "upper level of the line to the ground state"),
         _text("parameter", "parameter", "parameter of the cosmology", "parameters"),
         _weight("bound_bound", "strength of the dipole transition", "transition"),
         _weight("bound_free", "cross section of the level", "level"),

@@ -17,7 +17,7 @@ import numpy as np
 import atomic_tables
 
 from ..arrays import FloatArray
-from ..atomic.selection import Selector, level_mask, line_mask, pair_mask
+from ..atomic.selection import Selector, check_exists, level_mask, line_mask, pair_mask
 from ..atomic.selector_rows import (
     SELECTOR_COLUMNS,
     SelectorRow,
@@ -125,16 +125,13 @@ def uncertainties_in(setup: Setup, path: str | Path | None = None) -> tuple[Unce
         and are left out themselves with any other.
     """
     rows, atom = load_uncertainties(path), setup.atom_size
+    if path is not None:
+        for one in rows:
+            check_exists(one.selector, atom, one.where)
+        return rows
     found = tuple(one for one in rows if one.selector.exists_in(atom))
-    if path is None and setup.lines.hydrogen != "sobolev":
+    if setup.lines.hydrogen != "sobolev":
         found = tuple(one for one in found if one.selector.process != "escape")
-    for one in rows:
-        if path is not None and one not in found:
-            raise InputError(
-                f'{one.where}: selector "{one.selector.text}" matches nothing in hydrogen with '
-                f"n_max = {atom.n_max}, resolve_l_to = {atom.resolve_l_to} and "
-                f"lyman_lines = {atom.lyman_lines}"
-            )
     return found
 
 
@@ -198,9 +195,7 @@ def derivatives(weighing: Weighing, one: Uncertainty) -> FloatArray:
     elif process == "bound_free":
         chosen = level_mask(one.selector, weighing.levels)
     else:
-        # Lines are named "2p-1s", "13p-1s".
-        n_upper = np.array([int(name.partition("p")[0]) for name in weighing.lines], dtype=int)
-        chosen = line_mask(one.selector, n_upper)
+        chosen = line_mask(one.selector, weighing.levels.n[weighing.line_upper])
     if not chosen.any():
         raise InputError(
             f'{one.where}: selector "{one.selector.text}" matches nothing among the '

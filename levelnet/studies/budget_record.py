@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import re
 from dataclasses import dataclass
 from typing import NamedTuple
 
@@ -11,8 +10,6 @@ import numpy as np
 from ..arrays import FloatArray, frozen_array
 from ..errors import InputError
 from .targets import parse_target
-
-_ELECTRONS = re.compile(r"x_e\((.*)\)")
 
 
 class Contribution(NamedTuple):
@@ -24,11 +21,22 @@ class Contribution(NamedTuple):
 
 
 class Band(NamedTuple):
-    """x_e(z) with its 1-sigma error, redshift descending; every array of shape (n_redshift,)."""
+    """x_e(z) with its relative error, redshift descending.
+
+    Attributes
+    ----------
+    redshift, free_electron_fraction : ndarray, shape (n_redshift,), dimensionless
+        Each redshift once.
+    sigma : ndarray, shape (n_redshift,), dimensionless
+        Relative 1-sigma error.
+    contribution : ndarray, shape (n_redshift, n_groups), dimensionless
+        Relative change where the rates of one group are higher by 1 sigma.
+    """
 
     redshift: FloatArray
     free_electron_fraction: FloatArray
     sigma: FloatArray
+    contribution: FloatArray
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -79,9 +87,11 @@ class ErrorBudget:
         return tuple(Contribution(self.groups[k], float(row[k]), self.sources[k]) for k in order)
 
     def band(self) -> Band:
-        """x_e(z) with its absolute 1-sigma error, from the targets "x_e(Z)"; empty without any."""
-        found = [(k, _ELECTRONS.fullmatch(name)) for k, name in enumerate(self.targets)]
-        places = [(float(match[1]), k) for k, match in found if match is not None]
-        order = [k for _, k in sorted(places, reverse=True)]
-        redshift = np.array([z for z, _ in sorted(places, reverse=True)])
-        return Band(redshift, self.value[order], np.abs(self.value[order]) * self.sigma[order])
+        """x_e(z) with its relative error, from the targets "x_e(Z)"; empty without any."""
+        asked = [parse_target(name) for name in self.targets]
+        rows = {one.redshift: k for k, one in enumerate(asked) if one.kind == "x_e"}
+        redshift = sorted(rows, reverse=True)
+        order = [rows[z] for z in redshift]
+        return Band(
+            np.array(redshift), self.value[order], self.sigma[order], self.contribution[order]
+        )

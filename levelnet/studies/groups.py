@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import re
 from dataclasses import dataclass
 from typing import NamedTuple
 
@@ -10,7 +9,6 @@ import numpy as np
 
 from ..arrays import FloatArray, IntArray, frozen_array
 from ..atomic.levels import LevelSet, level_name
-from .budget_record import ErrorBudget
 from .weighing import Weighing
 
 
@@ -235,26 +233,3 @@ def shell_map(weighing: Weighing, target: str) -> tuple[IntArray, FloatArray]:
     np.add.at(weights, (upper, lower), weighing.bound_bound[weighing.index(target)])
     found[upper, lower] = True
     return n, np.where(found, weights, np.nan)
-
-
-def electron_rows(budget: ErrorBudget) -> tuple[FloatArray, list[int]]:
-    """Find x_e along redshift among the targets of a budget.
-
-    Parameters
-    ----------
-    budget : ErrorBudget
-        Any.
-
-    Returns
-    -------
-    redshift : ndarray, shape (n_redshift,), dimensionless
-        Where it has a target "x_e(Z)", ascending, each once.
-    rows : list of int, length n_redshift
-        Positions of these targets.
-    """
-    found: dict[float, int] = {}
-    for row, target in enumerate(budget.targets):
-        if match := re.fullmatch(r"x_e\((.+)\)", target):
-            found.setdefault(float(match[1]), row)
-    redshift = sorted(found)
-    return np.array(redshift), [found[one] for one in redshift]

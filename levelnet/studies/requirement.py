@@ -10,11 +10,11 @@ from pathlib import Path
 from typing import Annotated, Any, Literal
 
 import numpy as np
-from pydantic import BeforeValidator, Field
+from pydantic import Field
 
 from ..arrays import FloatArray
 from ..errors import InputError
-from ..records import build, checked_record, from_mapping
+from ..records import TUPLES, build, checked_record, from_mapping
 from ..texts import read_text
 from .response import Response, read_response
 from .targets import parse_target
@@ -23,10 +23,6 @@ _MOST_BYTES = 64_000_000  # a response may stand inside
 
 Error = Annotated[float, Field(gt=0.0, le=1.0)]
 Redshift = Annotated[float, Field(ge=0.0, le=10_000.0)]
-
-
-def _pair(value: object) -> object:
-    return tuple(value) if isinstance(value, list) else value
 
 
 @checked_record
@@ -44,7 +40,7 @@ class Range:
     """
 
     quantity: Literal["x_e", "T_m"]
-    redshift: Annotated[tuple[Redshift, Redshift], BeforeValidator(_pair)]
+    redshift: Annotated[tuple[Redshift, Redshift], TUPLES]
     relative: Error
 
     def __post_init__(self) -> None:

@@ -22,11 +22,11 @@ from pathlib import Path
 from typing import Annotated
 
 import numpy as np
-from pydantic import BeforeValidator, Field
+from pydantic import Field
 
 from ..arrays import FloatArray
 from ..errors import InputError
-from ..records import checked_record
+from ..records import TUPLES, checked_record
 from ..texts import read_bytes
 
 FIRST_LINE = "# levelnet response"
@@ -42,17 +42,10 @@ _SMALLEST_EIGENVALUE = 1e-10
 _NODES, _WEIGHTS = np.polynomial.legendre.leggauss(3)
 
 
-def _tuples(value: object) -> object:
-    # Python callers may give lists or arrays, which the strict check of a tuple refuses.
-    if isinstance(value, np.ndarray):
-        value = value.tolist()
-    return tuple(_tuples(one) for one in value) if isinstance(value, (list, tuple)) else value
-
-
 Row = tuple[float, ...]
-Numbers = Annotated[Row, BeforeValidator(_tuples)]
-Matrix = Annotated[tuple[Row, ...], BeforeValidator(_tuples)]
-Names = Annotated[tuple[str, ...], BeforeValidator(_tuples), Field(min_length=1)]
+Numbers = Annotated[Row, TUPLES]
+Matrix = Annotated[tuple[Row, ...], TUPLES]
+Names = Annotated[tuple[str, ...], TUPLES, Field(min_length=1)]
 
 
 @checked_record

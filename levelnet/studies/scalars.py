@@ -11,7 +11,7 @@ import numpy as np
 from scipy.interpolate import make_interp_spline
 
 from ..arrays import FloatArray
-from ..background.last_scattering import OBSERVABLES, Observed, observe
+from ..background.last_scattering import Observed, observe
 from ..background.parameters import COSMOLOGICAL, TEMPERATURE
 from ..background.quadrature import quadrature
 from ..constants import BOLTZMANN_EV_K
@@ -26,6 +26,7 @@ from ..network.gradient import (
 )
 from ..network.line_rates import kept_line_rates
 from ..numerics.collocation import WEIGHTS, stage_slopes
+from ..quantities import OBSERVABLES
 from .frozen import FrozenHistory
 from .targets import Target
 

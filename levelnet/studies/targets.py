@@ -7,21 +7,10 @@ import re
 from typing import NamedTuple
 
 from ..atomic.levels import level_name
-from ..background.last_scattering import UNITS, at_redshift
 from ..errors import InputError
 from ..history.cost import HIGHEST_N
+from ..quantities import ALIASES, AT_REDSHIFT, OBSERVABLES, at_redshift, known_targets
 
-ALIASES = {
-    "z_*": "last_scattering_redshift",
-    "r_s": "sound_horizon_mpc",
-    "k_D": "damping_per_mpc",
-    "z_drag": "drag_redshift",
-    "r_drag": "drag_horizon_mpc",
-    "tau": "optical_depth",
-}
-"""Short names that users may write; results carry the long ones."""
-AT_REDSHIFT = {"x_e": "1", "T_m": "K", "optical_depth": "1"}
-"""Quantities that need a redshift, and their units."""
 # As in the grid of a setup.
 _HIGHEST_REDSHIFT = 10_000.0
 _LETTERS = "".join(level_name(1, l)[-1] for l in range(21))
@@ -52,20 +41,13 @@ class Target(NamedTuple):
     lower: tuple[int, int] = (0, 0)
 
 
-def known_targets() -> str:
-    """List in one line what can be asked for."""
-    scalars = [f"{a} or {ALIASES[a]}" for a in ALIASES if ALIASES[a] in UNITS]
-    scalars += [name for name in UNITS if name not in ALIASES.values()]
-    return ", ".join(["x_e(Z)", "T_m(Z)", "optical_depth(Z) or tau(Z)", *scalars, "line(3d-2p)"])
-
-
 def parse_target(text: str) -> Target:
     """Read a target as a person writes it.
 
     Parameters
     ----------
     text : str
-        A name of :data:`levelnet.background.last_scattering.OBSERVABLES`; a quantity with its
+        A name or an alias of :data:`levelnet.quantities.OBSERVABLES`; a quantity with its
         redshift (0 to 10000), as in "x_e(900)"; or a line with both levels in either order, as in
         "line(3d-2p)".
 
@@ -78,10 +60,10 @@ def parse_target(text: str) -> Target:
     if match is None:
         raise InputError(f'target "{text}" is not known; known are {known_targets()}')
     name, argument = ALIASES.get(match[1], match[1]), match[2]
-    if name in UNITS:
+    if name in OBSERVABLES:
         if argument is not None:
             raise InputError(f'target "{text}": {name} takes no argument')
-        return Target(name, "observable", UNITS[name])
+        return Target(name, "observable", OBSERVABLES[name].unit)
     if name in AT_REDSHIFT:
         redshift = _redshift(text, match[1], argument)
         return Target(at_redshift(name, redshift), name, AT_REDSHIFT[name], redshift)

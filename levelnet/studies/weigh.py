@@ -185,6 +185,7 @@ def _assemble(
         found.upper,
         found.lower,
         history.equations.lines.names,
+        ladder.kept_position[history.equations.lines.upper],
         tuple(names),
         by_rate.bound_bound[:, found.place] / value[:, None],
         by_rate.bound_free / value[:, None],

@@ -37,6 +37,8 @@ class Weighing:
         Positions in `levels` of both ends of every dipole transition between excited levels.
     lines : tuple of str, length n_lines
         Lines to the ground state that exchange photons: "2p-1s", ...
+    line_upper : ndarray of int, shape (n_lines,)
+        Positions in `levels` of their upper levels.
     parameters : tuple of str, length n_parameters
         Parameters of the cosmology, named as in the setup.
     bound_bound : ndarray, shape (n_targets, n_transitions), dimensionless
@@ -66,6 +68,7 @@ class Weighing:
     upper: IntArray
     lower: IntArray
     lines: tuple[str, ...]
+    line_upper: IntArray
     parameters: tuple[str, ...]
     bound_bound: FloatArray
     bound_free: FloatArray
@@ -83,6 +86,7 @@ class Weighing:
             frozen_array(self, name, (count,))
         for name in ("upper", "lower"):
             frozen_array(self, name, (len(self.upper),), np.int64)
+        frozen_array(self, "line_upper", (len(self.lines),), np.int64)
         frozen_array(self, "bound_bound", (count, len(self.upper)))
         frozen_array(self, "bound_free", (count, len(self.levels)))
         frozen_array(self, "escape", (count, len(self.lines)))
@@ -111,7 +115,7 @@ class Weighing:
             "two_photon": float(self.two_photon[at]),
             "bound_bound": float(self.bound_bound[at].sum()),
             "bound_free": float(self.bound_free[at].sum()),
-            "lyman_alpha": float(self.escape[at, [line == "2p-1s" for line in self.lines]].sum()),
+            "lyman_alpha": float(self.escape[at, self.levels.n[self.line_upper] == 2].sum()),
             "escape": float(self.escape[at].sum()),
             "compton": float(self.compton[at]),
         }

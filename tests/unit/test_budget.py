@@ -9,8 +9,7 @@ import numpy as np
 import pytest
 
 import atomic_tables
-from levelnet.atomic.levels import hydrogenic_levels
-from levelnet.errors import InputError, Outcome, TableError
+from levelnet.errors import InputError, TableError
 from levelnet.studies import budget as room
 from levelnet.studies.budget import (
     derivatives,
@@ -19,41 +18,13 @@ from levelnet.studies.budget import (
     uncertainties_in,
 )
 from levelnet.studies.budget_record import Contribution
-from levelnet.studies.weighing import Weighing
 from levelnet.tables import read_table
+from tests.invented_weighing import plain_weighing
 from tests.small_runs import small_setup
 
 HEADER = "process,upper,lower,sigma,group,source"
-LEVELS = hydrogenic_levels(4)
-TARGETS = ("x_e(900)", "T_m(200)", "x_e(1100)")
-
-
-def invented_weighing() -> Weighing:
-    """Derivatives that are plain numbers; invented."""
-    n, l = LEVELS.n, LEVELS.l
-    upper, lower = np.nonzero((n[:, None] > n) & (n > 1) & (np.abs(l[:, None] - l) == 1))
-    count = len(TARGETS)
-    return Weighing(
-        small_setup(4, lines={"lyman_lines": 2}),
-        Outcome.CONVERGED,
-        TARGETS,
-        ("1", "K", "1"),
-        np.array([0.02, 490.0, 0.14]),
-        LEVELS,
-        upper,
-        lower,
-        ("2p-1s", "3p-1s"),
-        ("hubble_km_s_mpc",),
-        np.outer([1.0, -2.0, 0.5], np.arange(1.0, len(upper) + 1.0)),
-        np.outer([-1.0, 1.0, 3.0], np.arange(len(LEVELS)) / 10.0),
-        np.array([[-0.25, -0.01], [0.1, 0.02], [-0.23, -0.03]]),
-        np.array([-0.56, -0.04, -0.51]),
-        np.array([1e-4, 0.5, 1e-6]),
-        np.zeros((count, 1)),
-    )
-
-
-WEIGHED = invented_weighing()
+WEIGHED = plain_weighing()
+LEVELS = WEIGHED.levels
 
 
 @pytest.fixture
@@ -135,7 +106,8 @@ def test_the_band_holds_x_e_alone_in_descending_redshift(table) -> None:
     band = found.band()
     assert band.redshift.tolist() == [1100.0, 900.0]
     assert band.free_electron_fraction.tolist() == [0.14, 0.02]
-    np.testing.assert_allclose(band.sigma, [0.14 * 0.0051, 0.02 * 0.0056], rtol=1e-14)
+    np.testing.assert_allclose(band.sigma, [0.0051, 0.0056], rtol=1e-14)
+    np.testing.assert_allclose(band.contribution, [[-0.0051], [-0.0056]], rtol=1e-14)
 
 
 def test_arrays_are_read_only_and_shapes_checked(table) -> None:

@@ -18,16 +18,14 @@ from scipy.optimize import brentq
 from levelnet.background.adapters import from_astropy
 from levelnet.background.cosmology import Cosmology
 from levelnet.background.last_scattering import (
-    OBSERVABLES,
-    UNITS,
     Observed,
-    at_redshift,
     observe,
 )
 from levelnet.background.parameters import COSMOLOGICAL
 from levelnet.background.quadrature import Quadrature, quadrature
 from levelnet.errors import InputError
 from levelnet.history.run import solve
+from levelnet.quantities import OBSERVABLES, at_redshift
 from tests.small_runs import COSMOLOGY, small_setup
 
 # A universe with a heavy neutrino and curvature, so that each kind of density is there.
@@ -149,13 +147,13 @@ def test_values_against_scipy(name: str) -> None:
 
 def test_names_and_units() -> None:
     found = seen()
-    assert found.names[: len(OBSERVABLES)] == OBSERVABLES
+    assert found.names[: len(OBSERVABLES)] == tuple(OBSERVABLES)
     assert found.names[len(OBSERVABLES) :] == (
         "optical_depth(700)",
         "optical_depth(1100)",
         "optical_depth(1301.5)",
     )
-    assert found.units == (*UNITS.values(), "1", "1", "1")
+    assert found.units == (*(one.unit for one in OBSERVABLES.values()), "1", "1", "1")
     assert not found.gradient.flags.writeable
 
 
@@ -245,7 +243,7 @@ def test_age_against_astropy() -> None:
     grid = panels(ours)
     found = observe(ours, grid, fraction(grid.points))
     last, age = found.value[
-        [OBSERVABLES.index(f"last_scattering_{k}") for k in ("redshift", "time_s")]
+        [list(OBSERVABLES).index(f"last_scattering_{k}") for k in ("redshift", "time_s")]
     ]
     # Constants of astropy are of another edition of CODATA; G alone differs by no more than 1e-5.
     assert age == pytest.approx(theirs.age(last).to_value("s"), rel=1e-5)

@@ -38,9 +38,9 @@ from levelnet.studies.levels import (
 from levelnet.studies.requirement import Requirement, parse_requirement
 from levelnet.studies.rung import rung_setup, study_setup
 from levelnet.studies.verdict import population_changes, rung_errors, verdict, verdict_text
+from tests.same_records import assert_same
 from tests.small_levels import RUNGS, level_setup, small_study
 from tests.small_runs import small_setup
-from tests.unit.test_store_table import assert_same
 
 
 def test_rungs_are_histories_of_their_own() -> None:

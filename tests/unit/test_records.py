@@ -5,11 +5,12 @@ from __future__ import annotations
 import dataclasses
 from typing import Annotated, Literal
 
+import numpy as np
 import pytest
 from pydantic import Field
 
 from levelnet.errors import InputError, LevelnetError
-from levelnet.records import build, checked_record, from_mapping
+from levelnet.records import TUPLES, build, checked_record, from_mapping
 
 
 @checked_record
@@ -50,6 +51,28 @@ def test_a_record_is_a_frozen_dataclass() -> None:
     with pytest.raises(dataclasses.FrozenInstanceError):
         one.width_cm = 2.0  # type: ignore[misc]
     assert dataclasses.replace(one, on=True).on
+
+
+@checked_record
+class Table:
+    """Rows of numbers."""
+
+    rows: Annotated[tuple[tuple[float, ...], ...], TUPLES]
+
+
+def test_lists_and_arrays_become_tuples() -> None:
+    expected = ((1.0, 2.0), (3.0, 4.0))
+    for given in (
+        expected,
+        [[1.0, 2.0], [3.0, 4.0]],
+        np.array(expected),
+        [np.array([1.0, 2.0]), (3.0, 4.0)],
+    ):
+        assert Table(given).rows == expected
+    assert build(Table, {"rows": [[1.0, 2.0], [3.0, 4.0]]}).rows == expected
+    for wrong in (1.0, "12", {1.0: 2.0}, [1.0]):
+        with pytest.raises(InputError, match="rows"):
+            Table(wrong)  # type: ignore[arg-type]
 
 
 def test_records_compare_by_value_and_hash() -> None:

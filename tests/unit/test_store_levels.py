@@ -13,8 +13,8 @@ import levelnet
 from levelnet.errors import FileFormatError, InputError, Outcome
 from levelnet.store import LEVEL_LAYOUT, describe_level_layout, read_table
 from levelnet.studies.level_records import LevelStudy
+from tests.same_records import assert_same
 from tests.small_levels import RUNGS, small_study
-from tests.unit.test_store_table import assert_same
 
 
 def variants() -> dict[str, LevelStudy]:

@@ -34,6 +34,7 @@ from levelnet.store.digest import content_digest, seal
 from levelnet.store.read import read_content
 from levelnet.store.write import content_of, save
 from tests.invented_history import invented_history
+from tests.same_records import assert_same
 from tests.small_runs import COSMOLOGY
 from tests.small_tables import small_table
 
@@ -52,21 +53,6 @@ def invented_certificate(table: EffectiveTable) -> Certificate:
 def certified() -> EffectiveTable:
     table = small_table(lyman=2, two_photon="stimulated")
     return dataclasses.replace(table, certificate=invented_certificate(table))
-
-
-def assert_same(one: Any, other: Any) -> None:
-    """Equal in every field, arrays to the bit."""
-    assert type(one) is type(other)
-    for field in dataclasses.fields(one):
-        first, second = getattr(one, field.name), getattr(other, field.name)
-        if isinstance(first, np.ndarray):
-            assert first.dtype == second.dtype
-            assert first.tobytes() == second.tobytes(), field.name
-            assert not second.flags.writeable
-        elif dataclasses.is_dataclass(first) and field.name != "setup":
-            assert_same(first, second)
-        else:
-            assert first == second, field.name
 
 
 @pytest.fixture(scope="module")

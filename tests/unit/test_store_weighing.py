@@ -27,6 +27,7 @@ from levelnet.store.schema import Content
 from levelnet.store.write import content_of, save
 from levelnet.studies.weighing import Weighing
 from tests.invented_weighing import band_targets, invented_budget, invented_weighing
+from tests.same_records import assert_same
 
 TARGETS = ("x_e(900)", "z_*")
 
@@ -44,28 +45,12 @@ CASES: dict[str, Callable[[], Weighing]] = {
     "no transition": lambda: invented_weighing(n_max=2),
     "no notes": lambda: dataclasses.replace(invented_weighing(TARGETS), notes=()),
     "no open line": lambda: dataclasses.replace(
-        invented_weighing(TARGETS), lines=(), escape=np.zeros((2, 0))
+        invented_weighing(TARGETS), lines=(), line_upper=np.zeros(0, int), escape=np.zeros((2, 0))
     ),
     "target not reached": lambda: dataclasses.replace(
         invented_weighing(TARGETS), value=np.array([np.nan, -0.0])
     ),
 }
-
-
-def assert_same(one: Any, other: Any) -> None:
-    """Equal in every field, arrays to the bit."""
-    assert type(one) is type(other)
-    for field in dataclasses.fields(one):
-        first, second = getattr(one, field.name), getattr(other, field.name)
-        if isinstance(first, np.ndarray):
-            assert first.dtype == second.dtype
-            assert first.shape == second.shape
-            assert first.tobytes() == second.tobytes(), field.name
-            assert not second.flags.writeable
-        elif dataclasses.is_dataclass(first) and field.name != "setup":
-            assert_same(first, second)
-        else:
-            assert first == second, field.name
 
 
 @pytest.fixture(scope="module")
@@ -198,6 +183,10 @@ SPOILT: dict[str, tuple[Callable[[Content], None], str]] = {
     "short value": (with_values("weighing/value", lambda x: x[:1]), "damaged"),
     "upper too high": (with_values("weighing/upper", lambda x: x + 10**6), "upper: names levels"),
     "lower negative": (with_values("weighing/lower", lambda x: x - 10**6), "lower: names levels"),
+    "line too high": (
+        with_values("weighing/line_upper", lambda x: x + 10**6),
+        "line_upper: names levels",
+    ),
     "outcome": (with_attribute("outcome", "FINE"), 'outcome "FINE" is not known'),
     "setup": (with_attribute("setup", "not TOML ="), "stored setup: not valid TOML"),
     "newer": (with_attribute("layout_version", 2), "layout version 2 is newer than 1"),

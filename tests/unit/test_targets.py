@@ -6,9 +6,9 @@ import math
 
 import pytest
 
-from levelnet.background.last_scattering import OBSERVABLES, UNITS
 from levelnet.errors import InputError
-from levelnet.studies.targets import ALIASES, Target, known_targets, parse_target
+from levelnet.quantities import ALIASES, OBSERVABLES, known_targets
+from levelnet.studies.targets import Target, parse_target
 
 
 @pytest.mark.parametrize(
@@ -43,7 +43,7 @@ def test_names(text: str, name: str, kind: str, unit: str) -> None:
 @pytest.mark.parametrize("name", OBSERVABLES)
 def test_every_observable_is_a_target(name: str) -> None:
     target = parse_target(name)
-    assert (target.name, target.kind, target.unit) == (name, "observable", UNITS[name])
+    assert (target.name, target.kind, target.unit) == (name, "observable", OBSERVABLES[name].unit)
     assert math.isnan(target.redshift)
     assert name in known_targets()
 

@@ -11,10 +11,12 @@ import pytest
 from matplotlib.figure import Figure
 
 from levelnet.errors import InputError
+from levelnet.quantities import OBSERVABLES
 from levelnet.report.budget import band_figure
 from levelnet.report.importance import importance_figure
 from levelnet.report.style import house_style, render
 from levelnet.report.weights import (
+    OBSERVABLE_SYMBOLS,
     draw_bars,
     figure_paths,
     file_names,
@@ -93,11 +95,11 @@ def test_band_is_that_of_the_budget() -> None:
     budget = invented_budget(("z_*", *names))
     left, right = band_figure(budget).axes
     redshift, values = left.lines[2].get_data()
-    assert list(redshift) == sorted(float(name[4:-1]) for name in names)
+    assert list(redshift) == [float(name[4:-1]) for name in names]
     largest = int(np.argmax(np.max(np.abs(budget.contribution[1:]), axis=0)))
     assert left.lines[2].get_label() == GROUPS[largest]
-    np.testing.assert_allclose(values, 100.0 * budget.contribution[:0:-1, largest], rtol=1e-14)
-    np.testing.assert_allclose(right.lines[0].get_ydata(), 100.0 * budget.sigma[:0:-1], rtol=1e-14)
+    np.testing.assert_allclose(values, 100.0 * budget.contribution[1:, largest], rtol=1e-14)
+    np.testing.assert_allclose(right.lines[0].get_ydata(), 100.0 * budget.sigma[1:], rtol=1e-14)
     assert left.get_ylabel() == r"$\Delta x_e/x_e$ (per cent)"
 
 
@@ -228,7 +230,14 @@ def test_file_names_are_plain_and_different() -> None:
     plain = file_names(names)
     assert plain == ["x_e-900", "line-3d-2p", "z", "x_e-20.5", "x_e-900-4"]
     assert target_label("x_e(900)") == "$x_e$($z$ = 900)"
+    assert target_label("optical_depth(1100.5)") == r"$\tau$($z$ = 1100.5)"
     assert target_label("line(3d-2p)") == "line(3d-2p)"
+
+
+def test_every_observable_has_a_symbol() -> None:
+    assert list(OBSERVABLE_SYMBOLS) == list(OBSERVABLES)
+    assert len(set(OBSERVABLE_SYMBOLS.values())) == len(OBSERVABLES)
+    assert target_label("k_D") == target_label("damping_per_mpc") == "$k_D$"
 
 
 def test_unknown_target_is_one_line() -> None:

@@ -191,6 +191,7 @@ def test_a_correlated_group_is_a_run_with_all_its_rates_changed(tmp_path: Path) 
         np.array([levels.index(4, 2)]),
         np.array([levels.index(2, 1)]),
         ("2p-1s",),
+        np.array([levels.index(2, 1)]),
         (),
         by[3][:, None],
         level,

@@ -267,6 +267,8 @@ def test_changed_constants_further_lines_and_names_of_helium() -> None:
     }
     for selector, value in computed.items():
         assert value == pytest.approx(by_row(selector), rel=1e-4, abs=2e-8), selector
+    assert ours.levels.n[ours.line_upper].tolist() == [2, 3]
+    assert ours.levels.l[ours.line_upper].tolist() == [1, 1]
     assert "helium_mass_fraction" not in ours.parameters
     value = ours.parameter[0, ours.parameters.index("helium_nucleon_fraction")]
     expected = difference(
