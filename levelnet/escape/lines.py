@@ -19,9 +19,9 @@ class Lines:
 
     Parameters
     ----------
-    hydrogen : "closed", "open" or "sobolev"
-        Treatment of the Lyman lines: no escape at all (two-photon only), optically thin, or
-        Sobolev.
+    hydrogen : "closed", "open", "sobolev" or "sobolev_feedback"
+        Treatment of the Lyman lines: no escape at all (two-photon only), optically thin, Sobolev,
+        or Sobolev with each line lit by the photons that left the next line above.
     two_photon : "spontaneous" or "stimulated"
         2s-1s decay without or with stimulation by the blackbody. Stimulation alone, without the
         absorption of line photons by 1s -> 2s, overstates its effect (Kholupenko & Ivanchik 2006).
@@ -32,6 +32,6 @@ class Lines:
         next line below, so isolated high lines add escape without end.
     """
 
-    hydrogen: Literal["closed", "open", "sobolev"] = "sobolev"
+    hydrogen: Literal["closed", "open", "sobolev", "sobolev_feedback"] = "sobolev"
     two_photon: Literal["spontaneous", "stimulated"] = "spontaneous"
     lyman_lines: Annotated[int | str, AfterValidator(_line_count)] = 1

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import ClassVar, Protocol
 
 import numpy as np
@@ -14,6 +14,7 @@ from ..errors import InputError
 from ..network.coupling import GroundCoupling, blackbody_coupling
 from ..network.reduced import KeptLevels
 from ..network.solve import log_boltzmann_populations
+from .blue_side import BlueSide
 from .sobolev import escape_probability, escape_slope, sobolev_optical_depth
 
 
@@ -60,7 +61,8 @@ class ResonanceLines:
 class LineTreatment(Protocol):
     """How photons of the resonance lines escape; a member of the family or a user's own object.
 
-    A treatment has no memory: it answers from the conditions of the moment.
+    A treatment answers from the conditions of the moment, and, if it `sees_blue_side`, from the
+    field that the lines above have sent; what is remembered of them the run keeps.
 
     Attributes
     ----------
@@ -193,7 +195,67 @@ class Sobolev(_Isolated):
         return escape_probability(optical_depth), escape_slope(optical_depth)
 
 
-TREATMENTS: tuple[LineTreatment, ...] = (Closed(), Open(), Sobolev())
+@dataclass(frozen=True, slots=True)
+class SobolevFeedback(Sobolev):
+    """Sobolev, each line lit from its blue side by what the next line above has let through."""
+
+    name: ClassVar[str] = "sobolev_feedback"
+    sees_blue_side: ClassVar[bool] = True
+    assumes: ClassVar[tuple[str, ...]] = (
+        "Complete redistribution over the line profile.",
+        "Conditions stay constant while a photon crosses the line.",
+        "Lines do not overlap; photons that leave a line redshift unchanged to the next one below.",
+        "The highest open line sees the blackbody.",
+        "No continuum absorbs inside a line or between lines.",
+    )
+
+    def couple(
+        self,
+        lines: ResonanceLines,
+        kept: KeptLevels,
+        conditions: Conditions,
+        blue: BlueSide | None = None,
+    ) -> GroundCoupling:
+        """Couple each line to the field on its blue side; None: the blackbody.
+
+        With u the distortion there and f the blackbody, K = A P (1 + f u), and what the field
+        lifts beyond the blackbody is A P x_B (u - 1): the product of a rate and a departure.
+        """
+        plain = _Isolated.couple(self, lines, kept, conditions)
+        if blue is None:
+            return plain
+        upper, radiation_k = lines.upper, conditions.radiation_temperature_k
+        exponent = lines.energy_ev / (const.BOLTZMANN_EV_K * radiation_k)
+        depth, chance = plain.validity["optical_depth"], plain.validity["escape_probability"]
+        rate, slope = lines.einstein_a_per_s * chance, escape_slope(depth)
+        log_boltzmann = log_boltzmann_populations(kept, radiation_k, conditions.ground_fraction)
+        occupied = np.exp(blue.log_distortion - exponent) / -np.expm1(-exponent)  # f u
+        # A P x_B u and A P x_B (u - 1): each factor alone leaves the doubles in a cold field.
+        lit = rate * np.exp(log_boltzmann[upper] + blue.log_distortion)
+        lift = np.where(
+            blue.log_distortion < 1.0,
+            rate * np.exp(log_boltzmann[upper]) * np.expm1(np.minimum(blue.log_distortion, 1.0)),
+            lit - rate * np.exp(log_boltzmann[upper]),
+        )
+        loss, column, heat, source, ground, time = np.zeros((6, len(kept)))
+        loss[upper] = rate * (1.0 + occupied)
+        column[upper] = loss[upper] * slope
+        # d(f u)/d ln T at constant u: x f (1 + f) u.
+        heat[upper] = rate * occupied * exponent / -np.expm1(-exponent)
+        source[upper] = lift
+        ground[upper] = lift * (1.0 + slope)
+        time[upper] = lift * (slope * (-3.0 - blue.hubble_slope) - exponent) + lit * blue.slope
+        plain = blackbody_coupling(loss, column, heat, np.exp(log_boltzmann), plain.validity)
+        return replace(
+            plain,
+            source=plain.source + source,
+            excess_source=source,
+            excess_by_ground=ground,
+            excess_by_time=time,
+        )
+
+
+TREATMENTS: tuple[LineTreatment, ...] = (Closed(), Open(), Sobolev(), SobolevFeedback())
 
 
 def treatment(name: str) -> LineTreatment:

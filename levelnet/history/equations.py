@@ -16,15 +16,17 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
-from typing import NamedTuple
+from typing import Any, NamedTuple
 
 import numpy as np
 
+from .. import constants as const
 from ..arrays import FloatArray
 from ..atomic.physics import UNCHANGED, Scales
 from ..background.conditions import Conditions
 from ..background.cosmology import Cosmology
 from ..background.matter import compton_rate_per_s
+from ..escape.blue_side import BlueSide, Past, log_red_side
 from ..escape.treatment import LineTreatment, ResonanceLines
 from ..escape.two_photon import with_two_photon
 from ..network.coupling import GroundCoupling, with_line_factors
@@ -122,6 +124,8 @@ class SlowEquations:
         lines above hold it already.
     escape_factor : ndarray, shape (n_lines,), dimensionless, or None
         Overrides of the escape of each line; None: none.
+    past : Past or None
+        What the run remembers of the lines' red sides, where the treatment sees blue sides.
     """
 
     cosmology: Cosmology
@@ -132,6 +136,7 @@ class SlowEquations:
     two_photon_mode: str
     scales: Scales = UNCHANGED
     escape_factor: FloatArray | None = None
+    past: Past | None = None
 
     def background(self, log_scale: float) -> Background:
         """Background quantities at s = ln a."""
@@ -161,7 +166,7 @@ class SlowEquations:
             conditions.radiation_temperature_k, conditions.matter_temperature_k
         )
         coupling = with_two_photon(
-            self.line_coupling(conditions),
+            self.line_coupling(conditions, self._blue_side(log_scale, around)),
             kept,
             conditions,
             self.two_photon_rate_per_s,
@@ -169,9 +174,30 @@ class SlowEquations:
         )
         return Local(conditions, rates, coupling, solve_kept(kept, rates, coupling, conditions))
 
-    def line_coupling(self, conditions: Conditions) -> GroundCoupling:
+    def _blue_side(self, log_scale: float, around: Background) -> BlueSide | None:
+        return None if self.past is None else self.past.blue_side(log_scale, around.hubble_slope)
+
+    def remember(self, log_scale: float, state: FloatArray) -> None:
+        """Keep what an accepted step sends to the lines below, if the treatment asks for it."""
+        if self.past is None:
+            return
+        here = self.local(log_scale, state)
+        blue = self.past.blue_side(log_scale, 0.0)
+        departure = here.solution.log_population - here.solution.log_boltzmann
+        kt = const.BOLTZMANN_EV_K * here.conditions.radiation_temperature_k
+        depth = here.coupling.validity["optical_depth"]
+        upper, exponent = self.lines.upper, self.lines.energy_ev / kt
+        red = log_red_side(departure[upper], exponent, depth, blue.log_distortion)
+        self.past.remember(log_scale, red)
+
+    def line_coupling(self, conditions: Conditions, blue: BlueSide | None = None) -> GroundCoupling:
         """Coupling of the lines alone, without the two-photon channel."""
-        coupling = self.treatment.couple(self.lines, self.reduced.kept, conditions)
+        kept = self.reduced.kept
+        if blue is None:
+            coupling = self.treatment.couple(self.lines, kept, conditions)
+        else:
+            seeing: Any = self.treatment  # it asked for a past, so it takes the blue side
+            coupling = seeing.couple(self.lines, kept, conditions, blue)
         if self.escape_factor is None:
             return coupling
         return with_line_factors(coupling, self.lines.upper, self.escape_factor)
@@ -206,6 +232,8 @@ class SlowEquations:
         hubble_slope = self.background(log_scale).hubble_slope
         scale = -1.0 / (c.hubble_rate_per_s * c.ionized_fraction * c.ground_fraction)
         by_odds, by_time = self._flow_derivatives(slopes, c, flow, hubble_slope)
+        if here.coupling.excess_by_time is not None:
+            by_time += float(gradient.excess @ here.coupling.excess_by_time)
         compton = self._compton_per_hubble(c)
         cooling = compton * math.expm1(-state[1])
         helium = self.cosmology.helium_ratio()

@@ -10,6 +10,7 @@ import numpy as np
 
 from ..arrays import FloatArray
 from ..atomic.physics import scales
+from ..escape.blue_side import Past
 from ..escape.treatment import LineTreatment
 from ..escape.treatment import treatment as member
 from ..network.ladder import Ladder
@@ -123,15 +124,18 @@ def slow_equations(
     """
     factor = scales(setup.physics)
     lines = resonance_lines(reduced.kept, open_lyman_lines(setup), factor, setup.rates.network)
+    treatment = chosen or member(setup.lines.hydrogen)
+    remembers = getattr(treatment, "sees_blue_side", False)
     return SlowEquations(
         setup.cosmology,
         reduced,
         lines,
-        chosen or member(setup.lines.hydrogen),
+        treatment,
         setup.two_photon_rate_per_s * factor.two_photon_rate,
         setup.lines.two_photon,
         replace(factor, compton_rate=factor.compton_rate * setup.rates.compton_factor),
         setup.rates.escape_factors(reduced.kept.n[lines.upper]),
+        Past.of(lines.energy_ev) if remembers else None,
     )
 
 
@@ -214,8 +218,11 @@ def integrate_slow(
     outputs = [s for s in (-np.log1p(redshift)).tolist() if s > start]
     span = (outputs[-1] - start) if outputs else 1.0
 
-    def on_step(now: float) -> None:
+    def on_step(now: float, reached: FloatArray) -> None:
+        equations.remember(now, reached)
         tell("integrating", (now - start) / span)
+
+    equations.remember(start, state)
 
     return integrate(
         equations.rate,
@@ -227,4 +234,5 @@ def integrate_slow(
         first_step=1e-3,
         max_steps=setup.accuracy.max_steps,
         on_step=on_step,
+        longest_step=math.inf if equations.past is None else equations.past.longest_step,
     )

@@ -24,6 +24,9 @@ class GroundCoupling:
     excess_source : ndarray, shape (n_kept,), s^-1
         s less K times the Boltzmann populations at T_r over the ground state: exactly zero where
         the field outside the lines is a blackbody.
+    excess_by_ground, excess_by_time : ndarray, shape (n_kept,), s^-1
+        Its derivatives by ln of the ground population, and by ln a with the populations held; None
+        where it is zero.
     validity : mapping of str to ndarray
         Figures per line by which the treatment can be judged.
     """
@@ -34,6 +37,8 @@ class GroundCoupling:
     slope_temperature: FloatArray
     excess_source: FloatArray
     validity: dict[str, FloatArray] = field(default_factory=dict)
+    excess_by_ground: FloatArray | None = None
+    excess_by_time: FloatArray | None = None
 
 
 def blackbody_coupling(
@@ -113,4 +118,10 @@ def with_line_factors(
         slope_column=coupling.slope_column * by_level[:, None],
         slope_temperature=coupling.slope_temperature * by_level[:, None],
         excess_source=coupling.excess_source * by_level,
+        excess_by_ground=_times(coupling.excess_by_ground, by_level),
+        excess_by_time=_times(coupling.excess_by_time, by_level),
     )
+
+
+def _times(values: FloatArray | None, factor: FloatArray) -> FloatArray | None:
+    return None if values is None else values * factor

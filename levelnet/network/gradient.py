@@ -10,8 +10,7 @@ in the ground state, and dl.d - y.dK d = z.(dK d), z = 1 - y the chance that it 
 first. Both are solved for, so that neither is a difference. A pair of levels enters by its net flow
 times the difference of the two fates.
 
-Slopes of `excess_source` are not included: a treatment with a distorted field is stepped with them
-lagging.
+A distorted field enters by its excess source e: d phi = -(1 - y).de for the net flow.
 """
 
 from __future__ import annotations
@@ -59,6 +58,8 @@ class FlowGradient(NamedTuple):
         By ln R_ij, one direction.
     loss : ndarray, shape (n_kept, n_kept), dimensionless
         By K_ij, its source with it.
+    excess : ndarray, shape (n_kept,), dimensionless
+        By the excess source of each level.
     channel : ndarray, shape (n_kept,)
         By ln of a common factor on all that leads from level i to the ground state and back.
     """
@@ -69,6 +70,7 @@ class FlowGradient(NamedTuple):
     lift: FloatArray
     exchange: FloatArray
     loss: FloatArray
+    excess: FloatArray
     channel: FloatArray
 
 
@@ -150,6 +152,7 @@ def _gradient(
         -fate * solution.lift,
         -rates.exchange * d[:, None] * gain,
         np.multiply.outer(kept_back, d),
+        -kept_back,
         kept_back * solution.flow,
     )
 
@@ -171,7 +174,9 @@ def flow_slopes(
         + (gradient.exchange * rates.exchange_slope).sum()
         + (gradient.loss * coupling.slope_temperature).sum()
     )
-    captured = float(gradient.capture.sum())
+    captured, lifted = float(gradient.capture.sum()), float(gradient.lift.sum())
+    if coupling.excess_by_ground is not None:
+        lifted += float(gradient.excess @ coupling.excess_by_ground)
     return FlowSlopes(
         float(by_radiation),
         float(gradient.capture @ rates.recombination_slope_matter),
@@ -179,5 +184,5 @@ def flow_slopes(
         -by_column,
         captured,
         captured,
-        by_column + float(gradient.lift.sum()),
+        by_column + lifted,
     )

@@ -11,6 +11,7 @@ conditions).
 
 from __future__ import annotations
 
+import math
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 
@@ -122,7 +123,8 @@ def integrate(  # noqa: PLR0913 (each is a choice of the caller)
     *,
     first_step: float,
     max_steps: int,
-    on_step: Callable[[float], None] | None = None,
+    on_step: Callable[[float, FloatArray], None] | None = None,
+    longest_step: float = math.inf,
 ) -> Trajectory:
     """Integrate to every output in turn, the local error of each variable below `tolerance`.
 
@@ -143,7 +145,9 @@ def integrate(  # noqa: PLR0913 (each is a choice of the caller)
     max_steps : int
         Limit on accepted plus rejected steps.
     on_step : callable, optional
-        Told the time after every accepted step.
+        Told the time and the state after every accepted step.
+    longest_step : float
+        No step is longer.
 
     Returns
     -------
@@ -161,6 +165,7 @@ def integrate(  # noqa: PLR0913 (each is a choice of the caller)
                 break
             # Stretch or split evenly rather than leave a sliver before the output.
             pieces = max(1, int(np.ceil((target - now) / step - 0.1)))
+            pieces = max(pieces, math.ceil((target - now) / longest_step))
             trial = (target - now) / pieces
             end = target if pieces == 1 else now + trial
             try:
@@ -181,7 +186,7 @@ def integrate(  # noqa: PLR0913 (each is a choice of the caller)
             times.append(now)
             states.append(y)
             if on_step is not None:
-                on_step(now)
+                on_step(now, y)
     return Trajectory(np.array(times), np.array(states), outcome, rejected, evaluations)
 
 

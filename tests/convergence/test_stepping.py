@@ -259,7 +259,7 @@ def test_outputs_are_hit_exactly() -> None:
         1e-7,
         first_step=1.0,
         max_steps=1000,
-        on_step=told.append,
+        on_step=lambda time, state: told.append(time),
     )
     assert set(outputs) <= set(run.time.tolist())
     assert told == run.time[1:].tolist()
