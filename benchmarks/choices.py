@@ -25,7 +25,7 @@ from levelnet.history.result import History
 from levelnet.history.run import solve
 from levelnet.history.setup import Setup
 
-REDSHIFTS = (1400.0, 1300.0, 1200.0, 1100.0, 1000.0, 200.0)
+REDSHIFTS = (1400.0, 1300.0, 1200.0, 1100.0, 1050.0, 1000.0, 900.0, 800.0, 500.0, 200.0)
 
 
 def run(n_max: int, lines: dict[str, Any] | None = None, **hydrogen: Any) -> History:
@@ -50,6 +50,15 @@ def open_lyman_lines() -> None:
         text = "  ".join(f"{z:g}: {100 * x:.2f} %" for z, x in zip(REDSHIFTS, share, strict=True))
         print(f"n_max {n_max:3d}: share of the escape above Lyman-alpha  {text}")
         print(f"           change of x_e                         {change(one, every)}", flush=True)
+
+
+def feedback() -> None:
+    """Print what feedback among the Lyman lines does."""
+    one = run(12)
+    for count in (2, 3, 8):
+        lit = run(12, {"hydrogen": "sobolev_feedback", "lyman_lines": count})
+        print(f"feedback among {count} lines, against one:      {change(one, lit)}", flush=True)
+    print(f"against 8 isolated lines: {change(run(12, {'lyman_lines': 8}), lit)}", flush=True)
 
 
 def redshift_of(curve: CubicSpline, level: float) -> float:
@@ -98,6 +107,7 @@ def heat_of_recombination() -> None:
 if __name__ == "__main__":
     warnings.simplefilter("ignore", AccuracyWarning)
     open_lyman_lines()
+    feedback()
     without_two_photons()
     whole_shells()
     plain, plainer = run(30), run(30, energies="nonrelativistic")

@@ -6,6 +6,8 @@ import operator
 from collections.abc import Iterable
 
 from ..errors import InputError
+from ..escape.lines import Lines
+from ..escape.treatment import SobolevFeedback
 from ..history.atom import open_lyman_lines
 from ..history.setup import Setup
 
@@ -63,6 +65,15 @@ def choose_kept(setup: Setup, kept: Iterable[tuple[int, int]] | None) -> KeptCho
 
 def _l_fits(level: tuple[int, int]) -> bool:
     return 0 <= level[1] < level[0]
+
+
+def check_lines(lines: Lines) -> None:
+    """Refuse treatments whose memory the histories made from a table do not have."""
+    if lines.hydrogen == SobolevFeedback.name:
+        raise InputError(
+            f'lines.hydrogen = "{lines.hydrogen}": histories from a table remember nothing of the '
+            'lines above; allowed are "closed", "open" and "sobolev"; levelnet solve has it'
+        )
 
 
 def check_overrides(setup: Setup) -> None:

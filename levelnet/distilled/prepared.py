@@ -16,6 +16,7 @@ from ..errors import InputError
 from ..escape.lines import Lines
 from ..history.atom import resonance_lines
 from ..kernels.effective import Atom
+from .kept import check_lines
 from .stimulation import stimulation_polynomials
 from .table import EffectiveTable
 
@@ -102,7 +103,9 @@ def make_atom(
         raise InputError(
             f"two_photon_rate_per_s = {two_photon_rate_per_s:g}: allowed are 0 to 1e6 s^-1"
         )
-    measured = _measured_atom(table, table.setup.lines if lines is None else lines)
+    chosen = table.setup.lines if lines is None else lines
+    check_lines(chosen)
+    measured = _measured_atom(table, chosen)
     constants = measured.constants.copy()
     factor = scales(table.setup.physics if physics is None else physics)
     ln_scale = np.zeros(len(rate_names(table))) if scale is None else scale

@@ -19,6 +19,7 @@ from ..atomic.levels import level_name
 from ..background.last_scattering import ionized_redshift
 from ..background.parameters import COSMOLOGICAL, helium_mass_fraction
 from ..errors import InputError
+from ..escape.treatment import SobolevFeedback
 from ..history.cost import check_memory
 from ..history.integrate import Progress
 from ..history.notes import notes_of
@@ -137,6 +138,11 @@ def bytes_per_target(setup: Setup) -> float:
 
 def _check_targets(setup: Setup, targets: Sequence[Target]) -> None:
     """Raise InputError for what the atom has not, photons that stay, and integrals of nothing."""
+    if setup.lines.hydrogen == SobolevFeedback.name:
+        raise InputError(
+            f'lines.hydrogen = "{setup.lines.hydrogen}": a weighing has no memory of the lines '
+            'above; weigh with "sobolev"'
+        )
     top, lyman = setup.hydrogen.highest_resolved, setup.atom_size.lyman_lines
     end = setup.grid.redshift_end
     for target in targets:

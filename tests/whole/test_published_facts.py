@@ -19,6 +19,9 @@ from scipy.special import zeta
 from levelnet.atomic.bound_bound import einstein_a
 from levelnet.atomic.levels import hydrogenic_levels
 from levelnet.background.conditions import Conditions
+from levelnet.distilled.build import distill
+from levelnet.distilled.history import history_from_table
+from levelnet.errors import InputError
 from levelnet.escape.treatment import Sobolev
 from levelnet.escape.two_photon import with_two_photon
 from levelnet.history.atom import build_ladder, lyman_lines
@@ -26,6 +29,8 @@ from levelnet.history.result import History
 from levelnet.history.run import solve
 from levelnet.network.solve import solve_kept
 from levelnet.network.tabulation import live_reduction
+from levelnet.studies.weigh import weigh
+from tests.fast_tables import small_table
 from tests.small_runs import COSMOLOGY, small_setup
 from tests.tolerances import published
 
@@ -254,3 +259,38 @@ def test_three_level_limit(redshift: float) -> None:
     expected = c * (total * density * x * x - up)
     # Peebles leaves out the stimulated part of Lyman-alpha (e^-30) and what 1/1e15 leaves open.
     assert found == pytest.approx(expected, rel=1e-6)
+
+
+def test_feedback_among_lyman_lines() -> None:
+    # Chluba & Sunyaev 2007, Astron. Astrophys. 475, 109 (abstract): photons of higher lines,
+    # absorbed in the next line below, raise x_e by at most 0.22 per cent, near z = 1050, mostly
+    # from Lyman-beta to Lyman-alpha. Their atom and lines are not ours: held to a fifth of it.
+    redshifts = (1300.0, 1200.0, 1100.0, 1050.0, 1000.0, 900.0, 400.0)
+    grid = {"redshift_start": 1300.0, "redshift_end": 400.0, "redshifts": redshifts}
+
+    def x_e(name: str, count: int, relative: float = 1e-6) -> np.ndarray:
+        lines = {"hydrogen": name, "lyman_lines": count}
+        accuracy = {"relative": relative}
+        setup = small_setup(8, lines=lines, grid=grid, accuracy=accuracy)
+        return solve(setup).free_electron_fraction
+
+    lit = x_e("sobolev_feedback", 5)
+    change = lit / x_e("sobolev", 5) - 1.0
+    assert redshifts[int(np.argmax(change))] in {1100.0, 1050.0, 1000.0}
+    assert change.max() == pytest.approx(2.2e-3, rel=0.2)
+    two = x_e("sobolev_feedback", 2) / x_e("sobolev", 2) - 1.0
+    assert two.max() > 0.8 * change.max()
+    # The step control holds with what the run remembers, and steps are shorter than the delays.
+    np.testing.assert_allclose(x_e("sobolev_feedback", 5, 1e-8), lit, rtol=1e-6)
+    # One open line sees the blackbody: nothing changes.
+    np.testing.assert_allclose(x_e("sobolev_feedback", 1), x_e("sobolev", 1), rtol=1e-12)
+
+
+def test_feedback_is_refused_where_nothing_is_remembered() -> None:
+    setup = small_setup(4, lines={"hydrogen": "sobolev_feedback", "lyman_lines": 2})
+    with pytest.raises(InputError, match="remember nothing"):
+        distill(setup)
+    with pytest.raises(InputError, match="no memory"):
+        weigh(setup, "x_e(900)")
+    with pytest.raises(InputError, match="remember nothing"):
+        history_from_table(small_table(4), COSMOLOGY, lines=setup.lines)
