@@ -21,6 +21,7 @@ from ..escape.lines import Lines
 from ..records import build, checked_record, from_mapping
 from ..texts import read_text
 
+_MOST_FED_LINES = 10
 _MOST_BYTES = 64_000_000  # an expansion table may stand inside
 
 
@@ -137,7 +138,17 @@ class Setup:
                 f"lines: with hydrogen.resolve_l_to = {top} give a number from 1 to {top - 1}"
             )
         self.rates.check(self.atom_size)
+        self._check_feedback()
         self._check_overrides_act()
+
+    def _check_feedback(self) -> None:
+        """Refuse feedback among so many lines that steps shorter than its delays take for ever."""
+        count = self.atom_size.lyman_lines
+        if self.lines.hydrogen == "sobolev_feedback" and count > _MOST_FED_LINES:
+            raise ValueError(
+                f"lines.lyman_lines: {count} lines with feedback; allowed are 1 to "
+                f"{_MOST_FED_LINES}: further ones change x_e by about 1e-6 in all"
+            )
 
     def _check_overrides_act(self) -> None:
         """Refuse factors on rates that this setup switches off."""

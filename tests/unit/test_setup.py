@@ -16,6 +16,7 @@ from levelnet.background.cosmology import Cosmology
 from levelnet.errors import InputError
 from levelnet.escape.lines import Lines
 from levelnet.history.setup import Accuracy, Grid, Setup, load_setup, parse_setup
+from tests.small_runs import small_setup
 
 COSMOLOGY = {"hubble_km_s_mpc": 68.0, "baryon_density_h2": 0.0224, "matter_density_h2": 0.142}
 VALUES: dict[str, Any] = {"cosmology": COSMOLOGY, "hydrogen": {"n_max": 10}}
@@ -264,3 +265,11 @@ def test_random_setups_never_give_a_traceback(values: dict[str, Any]) -> None:
         parse_setup(text)
     except InputError as error:
         assert "\n" not in str(error)
+
+
+def test_feedback_among_too_many_lines() -> None:
+    fed = {"hydrogen": "sobolev_feedback"}
+    assert small_setup(11, lines=fed | {"lyman_lines": "all"}).atom_size.lyman_lines == 10
+    for count in ("all", 11):
+        with pytest.raises(InputError, match="allowed are 1 to 10"):
+            small_setup(30, lines=fed | {"lyman_lines": count})
