@@ -158,7 +158,7 @@ def test_own_line_treatment_example_runs(first_example: dict[str, Any]) -> None:
     leaky, plain = names["leaky"], names["history"]
     assert leaky.outcome.ok
     assert any("LeakyLines" in note for note in leaky.notes)
-    # Lyman-alpha's escape falls to 1.8e-9: the leak is 6 per cent of it, and ln x_e answers to ln of
+    # The escape falls to 1.8e-9: the leak is 6 per cent of it, and ln x_e answers to ln of
     # the escape with -0.25 (`weigh`).
     change = leaky.free_electron_fraction / plain.free_electron_fraction - 1.0
     assert change.min() == pytest.approx(-0.25 * 0.056, rel=0.2)
