@@ -11,6 +11,7 @@ from scipy.interpolate import CubicSpline
 
 from ..arrays import FloatArray
 from ..errors import InputError, SolveError
+from ..escape.treatment import LineTreatment
 from ..history.equations import Linearized, SlowEquations
 from ..history.integrate import Integrated, Progress, integrate_history
 from ..history.setup import Setup
@@ -68,6 +69,7 @@ def freeze(
     start_above: float,
     tell: Progress,
     pieces: Pieces | None = None,
+    line_treatment: LineTreatment | None = None,
 ) -> FrozenHistory:
     """Integrate a setup, then solve it again on the steps that were found.
 
@@ -81,7 +83,7 @@ def freeze(
         Levels to keep from elimination.
     start_above : float, dimensionless
         Redshift above which the integration must start.
-    tell, pieces
+    tell, pieces, line_treatment
         As for :func:`levelnet.solve`.
     """
     if not setup.accuracy.interpolate:
@@ -96,7 +98,9 @@ def freeze(
     )
     above = max(start_above, _HEADROOM * (1.0 + wanted[-1]) - 1.0)
     chosen = replace(setup, grid=grid)
-    integrated = integrate_history(chosen, tell, pieces, keeps=keeps, start_above=above)
+    integrated = integrate_history(
+        chosen, tell, pieces, line_treatment, keeps=keeps, start_above=above
+    )
     trajectory = integrated.trajectory
     if not trajectory.outcome.ok:
         raise SolveError(trajectory.outcome.value, outcome=trajectory.outcome)

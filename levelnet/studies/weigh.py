@@ -19,7 +19,8 @@ from ..atomic.levels import level_name
 from ..background.last_scattering import ionized_redshift
 from ..background.parameters import COSMOLOGICAL, helium_mass_fraction
 from ..errors import InputError
-from ..escape.treatment import SobolevFeedback
+from ..escape.treatment import LineTreatment
+from ..escape.treatment import treatment as member
 from ..history.cost import check_memory
 from ..history.integrate import Progress
 from ..history.notes import notes_of
@@ -59,6 +60,7 @@ def weigh(
     *,
     progress: Progress | None = None,
     pieces: Pieces | None = None,
+    line_treatment: LineTreatment | None = None,
 ) -> Weighing:
     """Weigh every rate of one history.
 
@@ -75,6 +77,8 @@ def weigh(
         ``progress(stage, fraction)``.
     pieces : Pieces, optional
         Store of reduced networks, as for :func:`levelnet.solve`.
+    line_treatment : LineTreatment, optional
+        In place of the one the setup names, as for :func:`levelnet.solve`; without memory.
 
     Returns
     -------
@@ -109,7 +113,9 @@ def weigh(
     check_memory(setup, more_bytes=len(parsed) * bytes_per_target(setup))
     with one_blas_thread():
         _check_targets(setup, parsed)
-        history = freeze(setup, *reach(setup, parsed), tell, pieces)
+        chosen = line_treatment or member(setup.lines.hydrogen)
+        _check_memory_free(chosen)
+        history = freeze(setup, *reach(setup, parsed), tell, pieces, chosen)
         scalars = scalars_of(history, parsed)
         for target, value in zip(parsed, scalars.value.tolist(), strict=True):
             if not np.isfinite(value):
@@ -136,13 +142,16 @@ def bytes_per_target(setup: Setup) -> float:
     return 2.0 * 8.0 * (top**3 / 3.0 + shells * top**2 / 2.0 + shells**2)
 
 
+def _check_memory_free(chosen: LineTreatment) -> None:
+    if getattr(chosen, "sees_blue_side", False):
+        raise InputError(
+            f'lines.hydrogen = "{chosen.name}": a weighing has no memory of the lines above; '
+            'weigh with "sobolev"'
+        )
+
+
 def _check_targets(setup: Setup, targets: Sequence[Target]) -> None:
     """Raise InputError for what the atom has not, photons that stay, and integrals of nothing."""
-    if setup.lines.hydrogen == SobolevFeedback.name:
-        raise InputError(
-            f'lines.hydrogen = "{setup.lines.hydrogen}": a weighing has no memory of the lines '
-            'above; weigh with "sobolev"'
-        )
     top, lyman = setup.hydrogen.highest_resolved, setup.atom_size.lyman_lines
     end = setup.grid.redshift_end
     for target in targets:

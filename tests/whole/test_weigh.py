@@ -304,3 +304,13 @@ def test_targets_that_are_no_text(targets: Any) -> None:
         weigh(small_setup(4), targets)
     with pytest.raises(InputError, match="a Setup is needed"):
         weigh("setup.toml", ["z_*"])  # type: ignore[arg-type]
+
+
+def test_a_treatment_of_ones_own() -> None:
+    setup = small_setup(5)
+    twice = weigh(setup, "x_e(900)", line_treatment=ScaledSobolev(2.0))
+    rows = {"rows": ("escape,2p,,2.0,,test",)}
+    plain = weigh(dataclasses.replace(setup, rates=rows), "x_e(900)")
+    assert twice.value[0] == pytest.approx(plain.value[0], rel=1e-9)
+    assert twice.two_photon[0] == pytest.approx(plain.two_photon[0], rel=1e-7)
+    assert twice.escape[0, 0] == pytest.approx(plain.escape[0, 0], rel=1e-7)
