@@ -28,10 +28,24 @@ def without_overrides(setup: Setup) -> Setup:
     return plain
 
 
-def comparison_values(old: History, new: History) -> dict[str, Any]:
-    """Old, new and relative change of x_e at round redshifts and of every milestone.
+def further_observables(old: History, new: History, pieces: Any) -> dict[str, dict[str, float]]:
+    """Old, new and relative change of the observables that are no milestones of a history."""
+    from ..studies.rung import observables_of
 
-    A milestone that is not reached is NaN.
+    if not (old.outcome.ok and new.outcome.ok):
+        return {}
+    before, after = (observables_of(one.setup, pieces) for one in (old, new))
+    pairs = zip(before.names, before.value.tolist(), after.value.tolist(), strict=True)
+    marks = new.milestones.__slots__
+    return {name: _change(a, b) for name, a, b in pairs if name not in marks}
+
+
+def comparison_values(
+    old: History, new: History, further: dict[str, dict[str, float]]
+) -> dict[str, Any]:
+    """Old, new and relative change of x_e at round redshifts, of milestones and observables.
+
+    What is not reached is NaN.
     """
     rows = [k for k in sample_rows(new) if k < len(old.redshift)]
     before, after = (one.free_electron_fraction[rows] for one in (old, new))
@@ -50,6 +64,7 @@ def comparison_values(old: History, new: History) -> dict[str, Any]:
             "relative_change": after / before - 1.0,
         },
         "milestones": marks,
+        "observables": further,
     }
 
 
@@ -64,9 +79,8 @@ def _label(milestone: str) -> str:
     return one.label if one.unit == "1" else f"{one.label} ({one.unit})"
 
 
-def comparison_text(old: History, new: History) -> str:
+def comparison_text(values: dict[str, Any], old: History, new: History) -> str:
     """Return the same as a table, old and new side by side."""
-    values = comparison_values(old, new)
     electrons = values["free_electron_fraction"]
     lines = [("", "old", "new", "relative change")]
     columns = (electrons[name] for name in ("redshift", "old", "new", "relative_change"))
@@ -74,7 +88,7 @@ def comparison_text(old: History, new: History) -> str:
         (f"x_e at z = {z:.2f}", f"{a:.8e}", f"{b:.8e}", f"{change:+.2e}")
         for z, a, b, change in zip(*columns, strict=True)
     ]
-    for name, pair in values["milestones"].items():
+    for name, pair in (values["milestones"] | values["observables"]).items():
         cells = (f"{pair['old']:.8g}", f"{pair['new']:.8g}", f"{pair['relative_change']:+.2e}")
         shown = cells if math.isfinite(pair["relative_change"]) else ("not reached", "", "")
         lines.append((_label(name), *shown))

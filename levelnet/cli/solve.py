@@ -11,7 +11,12 @@ from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 from ..errors import AccuracyWarning, Outcome
-from .compare_rates import comparison_text, comparison_values, without_overrides
+from .compare_rates import (
+    comparison_text,
+    comparison_values,
+    further_observables,
+    without_overrides,
+)
 from .console import Console
 from .output import history_values, print_json, print_result, size_text, summary_text, time_text
 from .paths import check_target
@@ -74,20 +79,21 @@ def run(options: argparse.Namespace, console: Console) -> int:
         return _dry_run(setup, options.json)
     check_target(target, options.force, options.setup)
     history, seconds = compute(setup, console, cache=not options.no_cache)
-    old = None if plain is None else compute(plain, console, cache=not options.no_cache)[0]
+    compared = None
+    if plain is not None:
+        old, _ = compute(plain, console, cache=not options.no_cache)
+        pieces = None if options.no_cache else cache_pieces(console)
+        compared = comparison_values(old, history, further_observables(old, history, pieces))
 
     from ..store import write
 
     write(history, target, force=options.force)
     print_result(
         options.json,
-        lambda: (
-            history_values(history)
-            | ({} if old is None else {"compare_rates": comparison_values(old, history)})
-        ),
+        lambda: history_values(history) | ({} if compared is None else {"compare_rates": compared}),
         lambda: (
             summary_text(history)
-            + ("" if old is None else f"\n\n{comparison_text(old, history)}\n")
+            + ("" if compared is None else f"\n\n{comparison_text(compared, old, history)}\n")
         ),
         file=target,
         seconds=seconds,

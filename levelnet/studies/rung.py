@@ -151,6 +151,30 @@ def compute_rung(
         )
 
 
+def observables_of(setup: Setup, pieces: Pieces | None = None) -> Observed:
+    """What an observer makes of a setup's history: every observable, with derivatives.
+
+    Parameters
+    ----------
+    setup : Setup
+        The run.
+    pieces : Pieces, optional
+        Store of reduced networks.
+
+    Raises
+    ------
+    SolveError
+        If the run ended before its last output.
+    """
+    with one_blas_thread():
+        start = ionized_redshift(setup.cosmology)
+        integrated = integrate_history(setup, lambda *_: None, pieces, start_above=start)
+        outcome = integrated.trajectory.outcome
+        if not outcome.ok:
+            raise SolveError(outcome.value, outcome=outcome)
+        return observed(setup, integrated, ())
+
+
 def observed(setup: Setup, integrated: Integrated, optical_depth_to: tuple[float, ...]) -> Observed:
     """What an observer makes of the history; integrals start where the integration does."""
     redshift = integrated.redshift

@@ -75,6 +75,17 @@ def test_the_same_as_json(folder: Path, capsys: pytest.CaptureFixture[str]) -> N
     assert len(electrons["redshift"]) == len(old)
     mark = values["milestones"]["last_scattering_redshift"]
     assert mark["relative_change"] == pytest.approx(mark["new"] / mark["old"] - 1.0, rel=1e-12)
+    # A two-photon rate 1 per cent higher: the adjoint says what the observables make of both rows.
+    further = values["observables"]
+    assert set(further) == {
+        "sound_horizon_mpc",
+        "damping_per_mpc",
+        "drag_redshift",
+        "drag_horizon_mpc",
+    }
+    for one in further.values():
+        assert one["relative_change"] == pytest.approx(one["new"] / one["old"] - 1.0, rel=1e-12)
+        assert 1e-6 < abs(one["relative_change"]) < 1e-2
     assert [one["rates"] for one in values["overrides"]] == [
         "bound_bound 3d 2p = 65000000 per s",
         "two_photon 2s x 1.01",
