@@ -8,7 +8,7 @@ from typing import NamedTuple
 import numpy as np
 
 from ..arrays import FloatArray, IntArray, frozen_array
-from ..atomic.levels import LevelSet, level_name
+from ..atomic.levels import level_name
 from .weighing import Weighing
 
 
@@ -107,7 +107,7 @@ def by_level(weighing: Weighing, target: str) -> Shares:
         If the target was not weighed.
     """
     levels = weighing.levels
-    names = tuple(name_of(levels, k) for k in range(len(levels)))
+    names = tuple(map(level_name, levels.n.tolist(), levels.l.tolist()))
     return _shares(weighing, target, np.arange(len(levels)), names)
 
 
@@ -167,16 +167,11 @@ def top_transitions(weighing: Weighing, target: str, count: int) -> tuple[Transi
     )
 
 
-def name_of(levels: LevelSet, position: int) -> str:
-    """Name of the level at a position: "3d", or "n=40" for a whole shell."""
-    n, l = int(levels.n[position]), int(levels.l[position])
-    return f"n={n}" if l < 0 else level_name(n, l)
-
-
 def transition_name(weighing: Weighing, position: int) -> str:
     """Name of the transition at a position: upper level, lower level, as in "3d-2p"."""
-    upper, lower = int(weighing.upper[position]), int(weighing.lower[position])
-    return f"{name_of(weighing.levels, upper)}-{name_of(weighing.levels, lower)}"
+    levels = weighing.levels
+    ends = (int(weighing.upper[position]), int(weighing.lower[position]))
+    return "-".join(level_name(int(levels.n[k]), int(levels.l[k])) for k in ends)
 
 
 def level_map(weighing: Weighing, target: str) -> LevelMap:

@@ -13,14 +13,13 @@ import numpy as np
 from ..arrays import FloatArray
 from ..errors import InputError, Outcome, SolveError
 from ..history.cost import HIGHEST_N, check_memory, estimate
-from ..history.integrate import output_redshifts
+from ..history.integrate import Progress, output_redshifts
 from ..history.setup import Setup
 from ..pieces import Pieces
 from .convergence import FEWEST_RUNGS, carry, check_rung_count
 from .level_records import Estimate, Estimates, HeldOut, LevelStudy, Noise, Rungs
 from .rung import LOW_N, RungResult, compute_rung, rung_setup, study_setup
 
-Progress = Callable[[str, float], None]
 Task = Callable[[Setup], RungResult]
 
 DEFAULT_COUNT = 7
@@ -228,7 +227,7 @@ def _rungs(setups: list[Setup], results: list[RungResult]) -> Rungs:
     atoms = [one.hydrogen for one in setups]
     return Rungs(
         np.array([atom.n_max for atom in atoms]),
-        np.array([atom.resolve_l_to or atom.n_max for atom in atoms]),
+        np.array([atom.highest_resolved for atom in atoms]),
         np.array([one.electron_fraction for one in results]),
         np.array([one.matter_temperature_k for one in results]),
         np.array([one.observable for one in results]),

@@ -35,12 +35,7 @@ from ..numerics.threads import one_blas_thread
 from ..pieces import Pieces
 from .frozen import FrozenHistory, freeze
 from .scalars import Scalars, scalars_of
-from .sensitivity import (
-    line_parameters,
-    node_results,
-    stage_rates,
-    stages,
-)
+from .sensitivity import StageRates, line_parameters, node_results, stage_rates, stages
 from .targets import Target, parse_target
 from .weighing import Weighing
 
@@ -183,8 +178,9 @@ def _assemble(
     ladder = history.integrated.ladder
     weight, _ = adjoint(history.solution, scalars.by_state)
     flat = weight.reshape(len(targets), -1, 2)
-    direct = _direct(history, scalars, flat)
-    by_rate = _by_rates(history, scalars, flat[:, :, 0], tell)
+    rates = stage_rates(history)
+    direct = _direct(history, scalars, flat, rates)
+    by_rate = _by_rates(history, scalars, flat[:, :, 0], rates.scale, tell)
     found = transitions(ladder)
     value = scalars.value
     names, places, by_log = _parameters(history)
@@ -212,8 +208,9 @@ def _assemble(
     )
 
 
-def _direct(history: FrozenHistory, scalars: Scalars, weight: FloatArray) -> _Direct:
-    rates = stage_rates(history)
+def _direct(
+    history: FrozenHistory, scalars: Scalars, weight: FloatArray, rates: StageRates
+) -> _Direct:
     by_u, by_v = weight[:, :, 0], weight[:, :, 1]
     made = _Direct(
         by_u @ rates.two_photon,
@@ -231,11 +228,14 @@ def _direct(history: FrozenHistory, scalars: Scalars, weight: FloatArray) -> _Di
 
 
 def _by_rates(
-    history: FrozenHistory, scalars: Scalars, weight: FloatArray, tell: Progress
+    history: FrozenHistory,
+    scalars: Scalars,
+    weight: FloatArray,
+    scale: FloatArray,
+    tell: Progress,
 ) -> NodeWeights:
-    """DJ by the ln of every line strength and cross section."""
+    """DJ by the ln of every line strength and cross section; `scale` is that of the stages."""
     here = stages(history)
-    scale = stage_rates(history).scale
     sources = [node_results(history, weight * scale, [one.gradient for one in here])]
     for line in scalars.lines:
         own = np.zeros_like(weight)
