@@ -1,10 +1,15 @@
 """The part of a setup that chooses how photons of the resonance lines escape."""
 
-from typing import Annotated, Literal
+from typing import Annotated, Any, Literal
 
-from pydantic import AfterValidator
+from pydantic import AfterValidator, BeforeValidator, Field, ValidationInfo
 
-from ..records import checked_record
+from ..records import checked_record, from_mapping
+
+TWO_PHOTON_N_MAX = 10
+"""Highest n of ns and nd levels whose two-photon spectra are known."""
+COARSEST_STEP = 0.01
+"""Widest frequency step: a line and the next one up must stay many cells apart."""
 
 
 def _line_count(value: int | str) -> int | str:
@@ -14,24 +19,94 @@ def _line_count(value: int | str) -> int | str:
 
 
 @checked_record
+class Transfer:
+    """What a radiation field resolved in frequency takes part in.
+
+    Parameters
+    ----------
+    feedback : bool
+        Photons that leave a higher Lyman line travel down to the lines below. False: what lies
+        redward of a line above Lyman-alpha is a blackbody again.
+    excited_two_photon : bool
+        Two-photon decay of ns and nd, n >= 3, and its inverse, outside the lines themselves.
+    raman : bool
+        Raman scattering from 2s, 3s and 3d, and its inverse, outside the lines themselves.
+    scattering : bool
+        Resonance scattering in the wings of Lyman-alpha: diffusion with recoil.
+    frequency_step : float, 1e-5 to 0.01 (dimensionless), or None
+        d ln nu of a cell of the grid; None: as the asked accuracy needs it.
+    highest_two_photon_n : int, 3 to 10
+        Highest n of the levels in `excited_two_photon`.
+    """
+
+    feedback: bool = True
+    excited_two_photon: bool = True
+    raman: bool = True
+    scattering: bool = True
+    frequency_step: Annotated[float, Field(ge=1e-5, le=COARSEST_STEP)] | None = None
+    highest_two_photon_n: Annotated[int, Field(ge=3, le=TWO_PHOTON_N_MAX)] = 4
+
+
+def _two_photon_default(value: object, info: ValidationInfo) -> object:
+    if value is not None:
+        return value
+    return "distorted" if info.data.get("hydrogen") == "transfer" else "spontaneous"
+
+
+def _transfer_default(value: object, info: ValidationInfo) -> object:
+    if value is None and info.data.get("hydrogen") == "transfer":
+        return Transfer()
+    return value
+
+
+_BY_TREATMENT: Any = None  # stands for a default that depends on `hydrogen`
+
+
+@checked_record
 class Lines:
     """How line photons escape.
 
     Parameters
     ----------
-    hydrogen : "closed", "open", "sobolev" or "sobolev_feedback"
+    hydrogen : "closed", "open", "sobolev", "sobolev_feedback" or "transfer"
         Treatment of the Lyman lines: no escape at all (two-photon only), optically thin, Sobolev,
-        or Sobolev with each line lit by the photons that left the next line above.
-    two_photon : "spontaneous" or "stimulated"
-        2s-1s decay without or with stimulation by the blackbody. Stimulation alone, without the
-        absorption of line photons by 1s -> 2s, overstates its effect (Kholupenko & Ivanchik 2006).
+        Sobolev with each line lit by the photons that left the next line above, or the radiation
+        field from half of Lyman-alpha to the Lyman limit resolved in frequency.
+    two_photon : "spontaneous", "stimulated" or "distorted"
+        2s-1s decay without stimulation; stimulated by the blackbody; or that together with the
+        absorption of the real field by 1s -> 2s ("transfer" only, and the default there).
+        Stimulation alone overstates its effect (Kholupenko & Ivanchik 2006).
     lyman_lines : int >= 1, or "all"
         How many Lyman lines, from Lyman-alpha up, exchange photons with the ground state; the
         others are closed: np -> 1s is left out of the network. The default 1 is the better
         approximation of the truth: a photon that escapes a high Lyman line is absorbed in the
         next line below, so isolated high lines add escape without end.
+    transfer : Transfer, optional
+        What the field takes part in; only with ``hydrogen = "transfer"``.
     """
 
-    hydrogen: Literal["closed", "open", "sobolev", "sobolev_feedback"] = "sobolev"
-    two_photon: Literal["spontaneous", "stimulated"] = "spontaneous"
+    hydrogen: Literal["closed", "open", "sobolev", "sobolev_feedback", "transfer"] = "sobolev"
+    two_photon: Annotated[
+        Literal["spontaneous", "stimulated", "distorted"],
+        BeforeValidator(_two_photon_default),
+        Field(validate_default=True),
+    ] = _BY_TREATMENT
     lyman_lines: Annotated[int | str, AfterValidator(_line_count)] = 1
+    transfer: Annotated[
+        Transfer | None,
+        from_mapping(Transfer),
+        BeforeValidator(_transfer_default),
+        Field(validate_default=True),
+    ] = None
+
+    def __post_init__(self) -> None:
+        """Check the rules about several fields."""
+        if self.hydrogen == "transfer":
+            return
+        if self.two_photon == "distorted":
+            raise ValueError(
+                'two_photon = "distorted": the field it absorbs is known with '
+                'hydrogen = "transfer" only'
+            )
+        if self.transfer is not None:
+            raise ValueError('transfer: only with hydrogen = "transfer"')

@@ -114,6 +114,32 @@ class LineFigures:
             frozen_array(self, name, shape)
 
 
+@dataclass(frozen=True, slots=True, eq=False)
+class RadiationField:
+    """The radiation field around the Lyman lines, where the line treatment resolves it.
+
+    Attributes
+    ----------
+    redshift : ndarray, shape (n_spectra,), dimensionless
+        Output redshifts where it is kept, descending.
+    photon_energy_ev : ndarray, shape (n_energies,), eV
+        From half of Lyman-alpha to the Lyman limit, ascending.
+    log_distortion : ndarray, shape (n_spectra, n_energies), dimensionless
+        Natural logarithm of u, the occupation number over that of the blackbody at T_r.
+    """
+
+    redshift: FloatArray
+    photon_energy_ev: FloatArray
+    log_distortion: FloatArray
+
+    def __post_init__(self) -> None:
+        """Check shapes and make every array read-only."""
+        shape = (len(self.redshift), len(self.photon_energy_ev))
+        frozen_array(self, "redshift", shape[:1])
+        frozen_array(self, "photon_energy_ev", shape[1:])
+        frozen_array(self, "log_distortion", shape)
+
+
 @dataclass(frozen=True, slots=True)
 class Milestones:
     """Numbers that sum up a history; NaN where the grid does not reach the event.
@@ -245,6 +271,8 @@ class History:
         How the run went.
     notes : tuple of str
         What a user must know before relying on the result.
+    field : RadiationField or None
+        The field at some of the output redshifts, where the line treatment resolves it.
     """
 
     setup: Setup
@@ -269,6 +297,7 @@ class History:
     milestones: Milestones
     diagnostics: Diagnostics
     notes: tuple[str, ...] = ()
+    field: RadiationField | None = None
 
     def __post_init__(self) -> None:
         """Check shapes and make every array read-only."""
