@@ -116,6 +116,7 @@ class Step:
         """Let the field couple the levels."""
         self.one, self.now = one, now
         self.cells = cells or one.cells
+        self.ratio = weight_ratio(one.kept)
         self.room = make_room(self.cells)
         kernel.begin(self.cells, now.radiation_kt_ev, self.room)
         self.room.field[:] = field
@@ -126,7 +127,6 @@ class Step:
         n, kt = len(self.one.kept), self.now.radiation_kt_ev
         boltzmann = np.exp(-self.cells.energy_ev * np.expm1(self.cells.offset) / kt)
         self.room.boltzmann[:] = boltzmann
-        self.ratio = weight_ratio(self.one.kept)
         self.loss, self.source = np.zeros((n, n)), np.zeros(n)
         kernel.unit_absorption(self.cells, kt, self.ratio, self.room)
         kernel.couple_field(self.cells, self.now, self.ratio, self.room, self.loss, self.source)
@@ -138,9 +138,7 @@ class Step:
     def advance(self, departure: np.ndarray) -> tuple[float, np.ndarray, np.ndarray]:
         """Photons gained, the field as it leaves the cells (less the lowest), sides of lines."""
         sides = np.empty((len(self.cells.line_cell), 2))
-        gained = kernel.advance_field(
-            self.cells, self.now, self.ratio, departure, self.room, sides
-        )
+        gained = kernel.advance_field(self.cells, self.now, self.ratio, departure, self.room, sides)
         return gained, self.room.field[:-1].copy(), sides
 
 
@@ -163,3 +161,47 @@ def path_of(one: Atom, matter: float = 0.98, redshift: float = 1100.0) -> Path:
         equations, reference, middle - 0.02, middle + 0.02, setup.lines.two_photon != "distorted"
     )
 
+
+def steady_escape(width: float, recoil: bool = True) -> tuple[float, Step, tuple[float, float]]:
+    """Escape over Sobolev's once a constant source, T and H have made the field stationary.
+
+    Scattering alone acts. The volume nu^3/n_H of a packet is held constant too, as it is in truth.
+
+    Parameters
+    ----------
+    width : float
+        d ln nu asked.
+    recoil : bool
+        False: temperatures far above the photon's energy, at the same diffusion.
+
+    Returns
+    -------
+    escape : float
+    step : Step
+        The last one.
+    law : (float, float)
+        h nu/kT, and D_nu delta^2/H with D_nu the diffusion at the distance delta from the line,
+        both in ln nu.
+    """
+    one = atom("scattering", width, lyman=1)
+    cells, now = one.cells, moment(one.cells, 1.0)
+    law = (
+        cells.energy_ev / now.radiation_kt_ev,
+        now.scattering_per_s * now.ground / now.packet_per_s,
+    )
+    if not recoil:
+        now = now._replace(radiation_kt_ev=1e30, matter_kt_ev=1e30)
+    first = cells.first_scattering
+    below = cells.offset[first : first + len(cells.conductance)] - 0.5 * cells.step
+    flat = cells._replace(
+        growth=np.ones_like(cells.growth), conductance=cells.conductance * np.exp(-3.0 * below)
+    )
+    upper, departure = cells.line_upper[0], np.zeros(len(one.kept))
+    departure[upper] = now.ground * weight_ratio(one.kept)[upper]
+    step = Step(one, now, np.zeros(len(cells.offset)), flat)
+    escape = 0.0
+    for _ in range(math.ceil(0.15 / cells.step)):
+        step.couple()
+        escape = step.net(departure)[upper] / now.packet_per_s
+        step.advance(departure)
+    return float(escape), step, law
