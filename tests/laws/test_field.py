@@ -5,6 +5,7 @@ Every law is exact for the discretized step, on any grid, unless its test states
 
 from __future__ import annotations
 
+import itertools
 import math
 
 import numpy as np
@@ -16,6 +17,7 @@ from levelnet.atomic.bound_bound import einstein_a
 from levelnet.escape.sobolev import escape_probability, sobolev_optical_depth
 from levelnet.history.atom import resonance_lines
 from levelnet.kernels import transfer as kernel
+from tests.field_sparse import random_problem, sparse_step
 from tests.field_steps import (
     COARSE_STEP,
     DEFAULT_STEP,
@@ -30,7 +32,7 @@ from tests.field_steps import (
     weight_ratio,
 )
 from tests.small_runs import RECOMBINING
-from tests.tolerances import EQUILIBRIUM
+from tests.tolerances import ELIMINATION, EQUILIBRIUM
 
 # Sums over a thousand cells of terms of either sign.
 _PHOTONS = 1e-12
@@ -247,3 +249,18 @@ def test_lines_alone_are_sobolev(lyman: int) -> None:
     np.testing.assert_allclose(found[centred], expected[centred], rtol=EQUILIBRIUM)
     assert not np.any(step.loss - np.diag(np.diag(step.loss)))
     assert not np.any(step.source)
+
+
+@pytest.mark.parametrize(
+    ("which", "width", "lyman"),
+    [*itertools.product(SWITCHES, [COARSE_STEP], [1, 3]), ("all", DEFAULT_STEP, 3)],
+)
+def test_elimination_against_general_sparse_solver(which: str, width: float, lyman: int) -> None:
+    """Computed independently: scipy's sparse LU of all cells and levels, written anew."""
+    problem = random_problem(which, width, lyman)
+    before = problem.step.room.field.copy()
+    departure, out = sparse_step(*problem).solve(problem.step)
+    own, moved = problem.eliminate()
+    np.testing.assert_allclose(own, departure, rtol=ELIMINATION)
+    size = np.maximum(np.abs(moved), np.abs(before[1:]))
+    assert np.all(np.abs(moved - out) <= ELIMINATION * size)
