@@ -257,7 +257,7 @@ def resolve_field(
         equations,
         reference,
         start,
-        end + 4.0 * asked,
+        end,
         setup.lines.two_photon != "distorted",
     )
     fine, coarse = (
