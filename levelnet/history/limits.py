@@ -11,7 +11,7 @@ from collections.abc import Sequence
 
 import numpy as np
 
-from ..arrays import FloatArray
+from ..arrays import BoolArray, FloatArray
 from ..escape.treatment import LineTreatment
 from .line_figures import LineFigures
 
@@ -103,13 +103,13 @@ def _error_note(
     worst = int(np.argmax(error))
     return [
         f"warning: {name}, z = {_span(redshift, crossed)}: {figure} = {values[worst]:.2g} at z = "
-        f"{redshift[worst]:.0f}, where x_e may be off by {error[worst]:.1g} (limit "
-        f"{LARGEST_X_E_ERROR:g}): {meaning}"
+        f"{redshift[worst]:.0f}, where x_e may be off by {100.0 * error[worst]:.1f} % (limit "
+        f"{100.0 * LARGEST_X_E_ERROR:g} %): {meaning}"
     ]
 
 
 def _far_note(
-    name: str, redshift: FloatArray, far: FloatArray, depth: FloatArray, escape: FloatArray
+    name: str, redshift: FloatArray, far: BoolArray, depth: FloatArray, escape: FloatArray
 ) -> list[str]:
     if not far.any():
         return []
@@ -121,6 +121,6 @@ def _far_note(
     ]
 
 
-def _span(redshift: FloatArray, where: FloatArray) -> str:
-    inside = redshift[where.astype(bool)]
+def _span(redshift: FloatArray, where: BoolArray) -> str:
+    inside = redshift[where]
     return f"{inside[0]:.0f} to {inside[-1]:.0f}"

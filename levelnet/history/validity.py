@@ -99,6 +99,7 @@ def line_figures(
         widths = line_widths(lines, here.conditions, depth, lost[lines.upper])
         blue, red = _sides(equations, float(times[k]), here)
         source = log_source(*equations.line_state(here))
+        sent[k, -1] = blue[-1]  # no open line above the highest
         one = {
             "optical_depth": depth,
             "escape_probability": here.coupling.validity.get("escape_probability", depth * np.nan),
@@ -149,7 +150,7 @@ def line_widths(
     exponent = lines.energy_ev / (const.BOLTZMANN_EV_K * conditions.matter_temperature_k)
     rest_ev = const.HYDROGEN_ATOM_MASS_G * const.SPEED_OF_LIGHT_CM_S**2 / const.ERG_PER_EV
     diffused = math.gamma(4.0 / 3.0) * np.cbrt(3.0 * wing * lines.energy_ev / rest_ev / exponent)
-    first = np.minimum(1.0, (diffused / np.maximum(chance * wing, 1e-300)) ** 2)
+    first = np.minimum(1.0, diffused / np.maximum(chance * wing, 1e-99)) ** 2
     return Widths(
         damping,
         2.0 * np.maximum(doppler * core, wing),
@@ -213,7 +214,7 @@ def log_red_side_by_number(
     exponent = lines.energy_ev / kt
     modes = 8.0 * np.pi * conditions.hubble_rate_per_s / lines.wavelength_cm**3
     made = flow_per_s * (conditions.hydrogen_density_cm3 / modes)
-    with np.errstate(divide="ignore", invalid="ignore"):
+    with np.errstate(divide="ignore", over="ignore", invalid="ignore"):
         log_made = np.log(np.abs(made)) + exponent + np.log(-np.expm1(-exponent))
         taken = log_blue + np.log1p(-np.exp(log_made - log_blue))
         return np.asarray(np.where(made < 0.0, taken, np.logaddexp(log_blue, log_made)))
