@@ -9,8 +9,6 @@ from typing import TYPE_CHECKING, Any
 if TYPE_CHECKING:
     from ..history.result import History
 
-# Of the lines with the largest part in the net flow; all are in the file.
-_LINES_SHOWN = 3
 _COLUMNS = {
     "share": ("share", "{:.2e}"),
     "optical_depth": ("depth", "{:.2e}"),
@@ -24,24 +22,21 @@ _COLUMNS = {
 
 
 def line_rows(history: History, rows: Sequence[int]) -> list[tuple[str, ...]]:
-    """Table of the figures at some of the outputs, a row each; its first row names the columns.
+    """Table of figures of the line with the largest share; its first row names the columns.
 
     Parameters
     ----------
     history : History
         With at least one open line.
     rows : sequence of int
-        Positions of the outputs.
+        Positions of the outputs, a row each.
     """
-    lines, peak = history.lines, abs(history.lines.share).max(axis=0)
-    order = sorted(range(len(lines.names)), key=lambda line: -float(peak[line]))[:_LINES_SHOWN]
-    table = [("line", "z", *(head for head, _ in _COLUMNS.values()))]
-    for line in sorted(order):
-        for k in rows:
-            shown = [
-                form.format(getattr(lines, name)[k, line]) for name, (_, form) in _COLUMNS.items()
-            ]
-            table.append((lines.names[line], f"{history.redshift[k]:.2f}", *shown))
+    lines = history.lines
+    line = int(abs(lines.share).max(axis=0).argmax())
+    table = [(lines.names[line], *(head for head, _ in _COLUMNS.values()))]
+    for k in rows:
+        shown = [form.format(getattr(lines, name)[k, line]) for name, (_, form) in _COLUMNS.items()]
+        table.append((f"{history.redshift[k]:.2f}", *shown))
     return table
 
 

@@ -18,6 +18,7 @@ from scipy.interpolate import CubicSpline
 from .. import constants as const
 from ..arrays import FloatArray
 from ..background.conditions import Conditions
+from ..errors import InputError
 from ..escape.blue_side import Past, log_red_side, log_source
 from ..escape.treatment import ResonanceLines
 from ..network.gradient import net_flow_gradient
@@ -26,6 +27,7 @@ from .integrate import Integrated
 from .line_figures import LineFigures
 from .start import equilibrium_state
 
+_GIVEN = ("optical_depth", "escape_probability", "log_blue_side", "log_red_side")
 _STEP = 1e-3  # in ln a, of differences above the hand-over
 
 
@@ -95,14 +97,15 @@ def line_figures(
     sent = _sent_from_above(integrated, steps, times)
     columns: dict[str, list[FloatArray]] = {}
     for k, (here, lost) in enumerate(zip(moments, lost_per_s, strict=True)):
-        depth = here.coupling.validity.get("optical_depth", np.full(len(lines.names), np.nan))
+        said = _checked(here.coupling.validity, equations)
+        depth = said.get("optical_depth", np.full(len(lines.names), np.nan))
         widths = line_widths(lines, here.conditions, depth, lost[lines.upper])
         blue, red = _sides(equations, float(times[k]), here)
         source = log_source(*equations.line_state(here))
         sent[k, -1] = blue[-1]  # no open line above the highest
         one = {
             "optical_depth": depth,
-            "escape_probability": here.coupling.validity.get("escape_probability", depth * np.nan),
+            "escape_probability": said.get("escape_probability", depth * np.nan),
             "share": here.solution.flow[lines.upper] / here.solution.net_flow,
             "flow_response": _flow_response(here)[lines.upper],
             **widths._asdict(),
@@ -115,6 +118,18 @@ def line_figures(
         for name, value in one.items():
             columns.setdefault(name, []).append(value)
     return LineFigures(lines.names, **{name: np.array(rows) for name, rows in columns.items()})
+
+
+def _checked(said: dict[str, FloatArray], equations: SlowEquations) -> dict[str, FloatArray]:
+    """What a treatment gives, one value per line each; a user's own may be wrong."""
+    count = len(equations.lines.names)
+    for name in _GIVEN:
+        if name in said and np.shape(said[name]) != (count,):
+            raise InputError(
+                f'line treatment "{equations.treatment.name}": validity["{name}"] has shape '
+                f"{np.shape(said[name])}; allowed is ({count},), one value per open line"
+            )
+    return said
 
 
 def line_widths(

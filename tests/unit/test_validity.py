@@ -14,6 +14,8 @@ from scipy.integrate import quad
 
 from levelnet.atomic.bound_bound import einstein_a
 from levelnet.background.conditions import Conditions
+from levelnet.cli.line_output import line_rows, line_values
+from levelnet.errors import InputError
 from levelnet.escape.blue_side import log_red_side
 from levelnet.escape.treatment import ResonanceLines, Sobolev
 from levelnet.history.limits import ESCAPE_FACTOR, LARGEST_X_E_ERROR, limit_notes
@@ -274,12 +276,8 @@ def test_isolated_lines_see_the_blackbody_and_feedback_sees_the_line_above() -> 
     assert not fed.lines.log_blue_side[:, -1].any()
     # What it sees is not missing: to the interpolation of the memory.
     np.testing.assert_allclose(fed.lines.unseen_feedback, 0.0, atol=1e-4)
-    assert not closed_flow(history_with(hydrogen="closed")).any()
-
-
-def closed_flow(history: History) -> np.ndarray:
-    """Distortion on the red side: no photon leaves a closed line."""
-    return history.lines.log_red_side
+    # No photon leaves a closed line.
+    assert not history_with(hydrogen="closed").lines.log_red_side.any()
 
 
 def test_sobolev_is_warned_of_what_it_leaves_out() -> None:
@@ -369,3 +367,30 @@ def test_a_treatment_of_ones_own_fills_the_figures() -> None:
     told = solve(setup, line_treatment=Telling())
     assert np.all(told.lines.log_blue_side == 0.25) and np.all(told.lines.log_red_side == 0.5)
     assert not warnings_of(told, "")
+
+
+def test_a_figure_of_the_wrong_length_is_one_line() -> None:
+    class Wrong(Sobolev):
+        """Gives one value too many."""
+
+        name = "wrong"
+
+        def couple(self, *given: Any, **named: Any) -> Any:
+            made = Sobolev.couple(self, *given, **named)
+            return dataclasses.replace(made, validity={"optical_depth": np.ones(2)})
+
+    said = r'"wrong": validity\["optical_depth"\] has shape \(2,\); allowed is \(1,\)'
+    with pytest.raises(InputError, match=said):
+        solve(small_setup(3, 1500.0, 4), line_treatment=Wrong())
+
+
+def test_summary_shows_the_line_that_carries_most() -> None:
+    history = open_history()
+    rows = [0, near(history, 1100.0)]
+    head, _, second = line_rows(history, rows)
+    assert head[0] == "2p-1s" and len(head) == len(second)
+    shown = dict(zip(head[1:], second[1:], strict=True))
+    assert float(shown["share"]) == pytest.approx(history.lines.share[rows[1], 0], rel=1e-2)
+    values = line_values(history, rows)
+    assert list(values) == list(history.lines.names)
+    np.testing.assert_array_equal(values["3p-1s"]["share"], history.lines.share[rows, 1])
