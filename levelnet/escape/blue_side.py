@@ -38,23 +38,6 @@ class BlueSide(NamedTuple):
     hubble_slope: float
 
 
-def log_source(log_departure: FloatArray, exponent: FloatArray) -> FloatArray:
-    """Ln of a line's own source function over the blackbody at T_r.
-
-    Parameters
-    ----------
-    log_departure, exponent : ndarray, shape (n_lines,), dimensionless
-        As for :func:`log_red_side`.
-
-    Returns
-    -------
-    ndarray, shape (n_lines,), dimensionless
-        ln of [1/(g_u x_l/(g_l x_u) - 1)] (exp(h nu/k T_r) - 1).
-    """
-    own = log_departure + np.log(-np.expm1(-exponent))
-    return np.asarray(own - np.log1p(-np.exp(log_departure - exponent)))
-
-
 def log_red_side(
     log_departure: FloatArray, exponent: FloatArray, depth: FloatArray, log_blue: FloatArray
 ) -> FloatArray:
@@ -74,13 +57,15 @@ def log_red_side(
     Returns
     -------
     ndarray, shape (n_lines,), dimensionless
-        ln[u_L (1 - exp(-tau)) + u_blue exp(-tau)], ln u_L from :func:`log_source`.
+        ln[u_L (1 - exp(-tau)) + u_blue exp(-tau)], with u_L that of the line's own source
+        function, 1/(g_u x_l/(g_l x_u) - 1), over the blackbody.
 
     References
     ----------
     Sobolev 1960, Moving Envelopes of Stars (from memory).
     """
-    own = log_source(log_departure, exponent)
+    own = log_departure + np.log(-np.expm1(-exponent))
+    own -= np.log1p(-np.exp(log_departure - exponent))
     with np.errstate(divide="ignore"):
         return np.asarray(np.logaddexp(own + np.log(-np.expm1(-depth)), log_blue - depth))
 

@@ -45,8 +45,8 @@ class LineFigures:
         Where the Lorentz wing, from far away, has reached depth 1 of true absorption. Below the
         Doppler width the wing does not matter.
     source_slope : ndarray
-        d ln/d ln a of the source function of the line over the blackbody at T_r; a field that
-        only redshifts keeps that ratio.
+        d ln/d ln a of the source function of the line over the blackbody at T_r, stimulated
+        emission left out; a field that only redshifts keeps that ratio.
     source_change : ndarray
         thick_width_absorption times abs(source_slope): by how much the source function changes
         while photons cross the thick region. A steady treatment is off by that order.

@@ -19,7 +19,7 @@ from .. import constants as const
 from ..arrays import FloatArray
 from ..background.conditions import Conditions
 from ..errors import InputError
-from ..escape.blue_side import Past, log_red_side, log_source
+from ..escape.blue_side import Past, log_red_side
 from ..escape.treatment import ResonanceLines
 from ..network.gradient import net_flow_gradient
 from .equations import Local, SlowEquations
@@ -39,7 +39,8 @@ class Steps(NamedTuple):
     share : ndarray, shape (n_points, n_kept), dimensionless
         Part of each kept level in the net flow.
     log_source : ndarray, shape (n_points, n_lines), dimensionless
-        Ln of each line's source function over the blackbody.
+        Ln of each line's source function over the blackbody: the departure of its upper level from
+        Boltzmann at T_r, but for stimulated emission (1e-7 of it while hydrogen recombines).
     """
 
     share: FloatArray
@@ -67,7 +68,7 @@ def steps_of(integrated: Integrated) -> Steps:
     for s, state in zip(trajectory.time.tolist(), trajectory.state, strict=True):
         here = equations.local(s, state)
         share.append(here.solution.flow / here.solution.net_flow)
-        source.append(log_source(*equations.line_state(here)))
+        source.append(equations.line_state(here)[0])
     return Steps(np.array(share), np.array(source))
 
 
@@ -101,7 +102,7 @@ def line_figures(
         depth = said.get("optical_depth", np.full(len(lines.names), np.nan))
         widths = line_widths(lines, here.conditions, depth, lost[lines.upper])
         blue, red = _sides(equations, float(times[k]), here)
-        source = log_source(*equations.line_state(here))
+        source = equations.line_state(here)[0]
         sent[k, -1] = blue[-1]  # no open line above the highest
         one = {
             "optical_depth": depth,
@@ -274,9 +275,7 @@ def _source_slopes(integrated: Integrated, steps: Steps, times: FloatArray) -> F
     for k in np.flatnonzero(~below):
         ends = [float(times[k]) + side * _STEP for side in (-1.0, 1.0)]
         before, after = (
-            log_source(
-                *equations.line_state(equations.local(s, equilibrium_state(equations, s)[0]))
-            )
+            equations.line_state(equations.local(s, equilibrium_state(equations, s)[0]))[0]
             for s in ends
         )
         slopes[k] = (after - before) / (2.0 * _STEP)
