@@ -10,11 +10,11 @@ from typing import TYPE_CHECKING, Any
 
 from ..atomic.levels import LevelSet
 from ..errors import FileFormatError, InputError, LevelnetError, Outcome
+from ..history.line_figures import LineFigures
 from ..history.result import (
     Channels,
     Diagnostics,
     History,
-    LineFigures,
     Milestones,
     RadiationField,
     SpeciesPopulations,
