@@ -138,7 +138,7 @@ def check_ladder(setup: Setup, rungs: Sequence[int], resolve: Sequence[int] = ()
             f'lines.lyman_lines = "{lines}": every rung would open further lines, and isolated '
             "high lines add escape without end; give the number of lines that escape, such as 1"
         )
-    lowest = max(LOW_N, lines + 1)
+    lowest = max(LOW_N, lines + 1, *(n for n, _ in setup.lines.field_levels))
     for name, values in (("rungs", rungs), ("resolve", resolve)):
         text = ", ".join(str(value) for value in values)
         if any(a >= b for a, b in itertools.pairwise(values)):
@@ -146,7 +146,7 @@ def check_ladder(setup: Setup, rungs: Sequence[int], resolve: Sequence[int] = ()
         if values and values[0] < lowest:
             reason = f"populations of every (n, l) to n = {LOW_N} are recorded"
             if lowest > LOW_N:
-                reason = f"{lines} Lyman lines are open"
+                reason = f"{lines} Lyman lines are open, or the field needs levels so high"
             raise InputError(f"{name} = {text}: the lowest allowed is {lowest} ({reason})")
         if values and values[-1] > HIGHEST_N:
             raise InputError(f"{name} = {text}: allowed are {lowest} to {HIGHEST_N}")
