@@ -385,10 +385,11 @@ def advance_field(
         d[i] = departure[cells.level[i]] / (weight_ratio[cells.level[i]] * own)
     out = room.scaled[0] if n_levels else np.empty(n_cells)
     for j in range(n_cells):
-        emitted = 0.0
+        # First times the mean, as in K: far below the line in a cold field it is as large as the
+        # rest is small.
+        gain = -room.absorption[j] * room.lit[j]
         for i in range(n_levels):
-            emitted += room.unit[i, j] * d[i]
-        gain = emitted * room.mean[j] - room.absorption[j] * room.lit[j]
+            gain += room.unit[i, j] * room.mean[j] * d[i]
         out[j] = room.field[j] + gain / (moment.packet_per_s * cells.growth[j])
     first, n = cells.first_scattering, room.theta.shape[0]
     core = departure[cells.line_upper[0]] / (moment.ground * weight_ratio[cells.line_upper[0]])
