@@ -18,6 +18,9 @@ from ..network.solve import log_boltzmann_populations
 from .treatment import ResonanceLines, Sobolev
 from .two_photon import with_two_photon
 
+# exp of more is no double.
+_LARGEST_EXPONENT = 700.0
+
 
 @dataclass(frozen=True, slots=True, eq=False)
 class FieldRecord:
@@ -35,6 +38,8 @@ class FieldRecord:
         ln of the distortion on the blue and the red side of each line.
     decay_per_s : float, s^-1
         Spontaneous 2s-1s rate where that decay goes through the field, else 0.
+    resolves : tuple of str
+        What the field took part in, of "wings", "scattering", "feedback".
     """
 
     radiation_temperature_k: FloatArray
@@ -42,6 +47,7 @@ class FieldRecord:
     source: FloatArray
     log_sides: FloatArray
     decay_per_s: float
+    resolves: tuple[str, ...]
 
     def __post_init__(self) -> None:
         """Check shapes and make every array read-only."""
@@ -68,7 +74,7 @@ class ResolvedField(Sobolev):
     ----------
     loss, source, log_sides : CubicSpline or None
         Of the record, over -ln T_r.
-    decay_per_s : float, s^-1
+    decay_per_s, resolves : float (s^-1), tuple of str
         As in the record.
     """
 
@@ -76,6 +82,7 @@ class ResolvedField(Sobolev):
     source: CubicSpline | None = None
     log_sides: CubicSpline | None = None
     decay_per_s: float = 0.0
+    resolves: tuple[str, ...] = ()
 
     name: ClassVar[str] = "transfer"
     assumes: ClassVar[tuple[str, ...]] = (
@@ -99,6 +106,7 @@ class ResolvedField(Sobolev):
             record.spline(record.source),
             record.spline(record.log_sides),
             record.decay_per_s,
+            record.resolves,
         )
 
     def couple(
@@ -155,5 +163,6 @@ def log_distortion(
     exponent = energy_ev / (const.BOLTZMANN_EV_K * radiation_temperature_k)
     with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
         above = np.logaddexp(0.0, np.log(departure) + exponent)
-        below = np.log1p(departure * np.exp(exponent))
+        # Only what lies below the blackbody, or on it: there nothing is lost by the limit.
+        below = np.log1p(departure * np.exp(np.minimum(exponent, _LARGEST_EXPONENT)))
     return np.where(departure > 0.0, above, below)

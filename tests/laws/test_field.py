@@ -131,25 +131,31 @@ def test_atom_number(which: str) -> None:
     with departures.
     """
     rng = np.random.default_rng(6)
-    one = atom(which)
-    path, now = path_of(one), moment(one.cells)
-    n = len(one.kept)
-    stored = np.empty(path.series.shape[2])
+    one, around = atom(which), RECOMBINING
+    path, n = path_of(one), len(one.kept)
+    stored, square, line = np.empty(path.series.shape[2]), np.empty((2, n, n)), np.empty((2, n))
     kernel._stored(path, path.start + 0.013, stored)
-    interior, loss = np.empty((n, n)), np.empty((n, n))
-    source, departure = np.empty(n), np.empty(n)
-    kernel._interior(path, now.radiation_kt_ev, stored, interior)
+    slow = kernel.Slow(
+        around.hubble_rate_per_s,
+        around.hydrogen_density_cm3,
+        const.BOLTZMANN_EV_K * around.radiation_temperature_k,
+        around.electron_fraction,
+        around.ground_fraction,
+        math.log(0.99),
+    )
+    now = kernel._moment(path, slow)
+    kernel._interior(path, now.radiation_kt_ev, stored, square[0])
     at_line = math.exp(-one.cells.energy_ev / now.radiation_kt_ev)
     step = Step(one, now, at_line * rng.uniform(0.0, 3.0, len(one.cells.offset)))
-    pairs = np.array([RECOMBINING.hydrogen_density_cm3 * 0.15**2, 0.01])
-    flow = kernel._flow(
-        one.cells, path, now, stored, pairs, step.room, interior, loss, source, departure
-    )
-    capture = np.exp(stored[:n] + stored[n : 2 * n] * pairs[1]) * pairs[0]
+    balance = kernel.Balance(stored, square[0], square[1], line[0], line[1])
+    flow = kernel._flow(one.cells, path, slow, step.room, balance)
+    shift = slow.lag - stored[-2]
+    capture = np.exp(stored[:n] + stored[n : 2 * n] * shift)
+    capture *= around.hydrogen_density_cm3 * around.electron_fraction**2
     boltzmann = boltzmann_populations(one, now)
     # B_i x_B,i/x_1s is what is stored.
     ionization = np.exp(stored[2 * n : 3 * n]) * now.ground / boltzmann
-    net = capture - ionization * (boltzmann + departure)
+    net = capture - ionization * (boltzmann + balance.departure)
     assert abs(net.sum() - flow) <= 1e-9 * capture.sum()
     assert flow > 1e-6 * capture.sum()
 
