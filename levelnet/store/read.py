@@ -10,11 +10,11 @@ from typing import TYPE_CHECKING, Any
 
 from ..atomic.levels import LevelSet
 from ..errors import FileFormatError, InputError, LevelnetError, Outcome
+from ..history.line_figures import LineFigures
 from ..history.result import (
     Channels,
     Diagnostics,
     History,
-    LineFigures,
     Milestones,
     RadiationField,
     SpeciesPopulations,
@@ -29,7 +29,7 @@ from .table_layout import DISTILLED_LAYOUT, TABLE_LAYOUT
 from .weighing_layout import WEIGHING_LAYOUT
 
 if TYPE_CHECKING:
-    from ..distilled.history import FastHistory
+    from ..distilled.fast import FastHistory
     from ..distilled.table import EffectiveTable
     from ..studies.level_records import LevelStudy
     from ..studies.weighing import Weighing
@@ -172,7 +172,7 @@ def _all_fields(content: Content, kind: Layout) -> dict[str, Any]:
 
 def distilled_of(content: Content) -> FastHistory:
     """Make the history that :func:`levelnet.store.write.write_distilled` took apart."""
-    from ..distilled.history import FastHistory
+    from ..distilled.fast import FastHistory
     from ..distilled.observables import Observables
 
     parts = _all_fields(content, DISTILLED_LAYOUT)
