@@ -176,10 +176,11 @@ def distilled_of(content: Content) -> FastHistory:
     from ..distilled.observables import Observables
 
     parts = _all_fields(content, DISTILLED_LAYOUT)
-    seen = parts.pop("observables", None)
+    seen, field = parts.pop("observables", None), parts.pop("field", None)
     return FastHistory(
         outcome=_outcome(content),
         observables=None if seen is None else Observables(**seen),
+        field=None if field is None else RadiationField(**field),
         **parts,
     )
 
