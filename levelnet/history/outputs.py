@@ -94,7 +94,7 @@ def assemble_history(
         depth,
         visibility,
         (_species(integrated, outputs),),
-        _channels(integrated, redshift, outputs),
+        channels(integrated, redshift, np.array([o.local.solution.flow for o in outputs])),
         _line_figures(integrated, outputs),
         marks,
         _diagnostics(integrated, outputs, slowest),
@@ -185,11 +185,11 @@ def _species(integrated: Integrated, outputs: list[_Output]) -> SpeciesPopulatio
     return SpeciesPopulations(ladder.species, levels, population, log_departure)
 
 
-def _channels(integrated: Integrated, redshift: FloatArray, outputs: list[_Output]) -> Channels:
+def channels(integrated: Integrated, redshift: FloatArray, net: FloatArray) -> Channels:
+    """Channels from the net flows to the ground state, shape (n_redshift, n_kept), s^-1."""
     kept = integrated.ladder.kept
     levels = zip(kept.n.tolist(), kept.l.tolist(), strict=True)
     names = tuple(f"{level_name(n, l)}-1s" for n, l in levels)
-    net = np.array([o.local.solution.flow for o in outputs])
     share = net / net.sum(axis=1, keepdims=True)
     cumulative = _cumulative(integrated.equations, integrated.trajectory)(-np.log1p(redshift))
     total = cumulative.sum(axis=1, keepdims=True)

@@ -1,0 +1,100 @@
+"""One variant of a study of the escape: a history without its populations."""
+
+from __future__ import annotations
+
+from typing import NamedTuple
+
+import numpy as np
+
+from ..arrays import FloatArray
+from ..background.last_scattering import ionized_redshift
+from ..errors import Outcome, SolveError
+from ..history.equations import ionized_and_neutral
+from ..history.integrate import integrate_history
+from ..history.outcome import outcome_of, relaxation_hubble
+from ..history.outputs import channels, state_at
+from ..history.result import Channels, RadiationField
+from ..history.setup import Setup
+from ..numerics.threads import one_blas_thread
+from ..pieces import Pieces
+from .rung import observed
+
+
+class VariantResult(NamedTuple):
+    """What one variant gives.
+
+    Attributes
+    ----------
+    electron_fraction, matter_temperature_k : ndarray, shape (n_redshift,)
+        n_e/n_H and T_m in K.
+    observable_names, observable_units : tuple of str, length n_observables
+        As in :class:`levelnet.background.last_scattering.Observed`.
+    observable : ndarray, shape (n_observables,)
+        In these units; NaN where the grid does not reach the event.
+    channels : Channels
+        How atoms reached the ground state.
+    field : RadiationField or None
+        The field, if the treatment resolves one.
+    outcome : Outcome
+        How the run ended.
+    """
+
+    electron_fraction: FloatArray
+    matter_temperature_k: FloatArray
+    observable_names: tuple[str, ...]
+    observable_units: tuple[str, ...]
+    observable: FloatArray
+    channels: Channels
+    field: RadiationField | None
+    outcome: Outcome
+
+
+def compute_variant(
+    named: tuple[str, Setup],
+    keeps: tuple[tuple[int, int], ...],
+    pieces: Pieces | None,
+    optical_depth_to: tuple[float, ...] = (),
+) -> VariantResult:
+    """Compute one variant: the task of a worker.
+
+    Parameters
+    ----------
+    named : tuple of str and Setup
+        What the variant is called, and its setup.
+    keeps : tuple of (n, l)
+        Levels kept from elimination, the same for all variants, so that they share the interior.
+    pieces : Pieces or None
+        Where reduced networks are kept.
+    optical_depth_to : tuple of float, dimensionless
+        Redshifts Z for optical_depth(Z).
+
+    Raises
+    ------
+    SolveError
+        If the run ended before its last output.
+    """
+    name, setup = named
+    with one_blas_thread():
+        start = ionized_redshift(setup.cosmology)  # observables start there
+        integrated = integrate_history(
+            setup, lambda *_: None, pieces, keeps=keeps, start_above=start
+        )
+        outcome = integrated.trajectory.outcome
+        if not outcome.ok:
+            raise SolveError(f"{name}: {outcome.value}", outcome=outcome)
+        redshift = integrated.redshift
+        times = (-np.log1p(redshift)).tolist()
+        states = np.array([state_at(integrated, s) for s in times])
+        here = [integrated.equations.local(s, y) for s, y in zip(times, states, strict=True)]
+        seen = observed(setup, integrated, optical_depth_to)
+        flows = np.array([one.solution.flow for one in here])
+        return VariantResult(
+            np.array([ionized_and_neutral(u)[0] for u in states[:, 0].tolist()]),
+            setup.cosmology.radiation_temperature_k(redshift) * np.exp(states[:, 1]),
+            seen.names,
+            seen.units,
+            seen.value,
+            channels(integrated, redshift, flows),
+            None,
+            outcome_of(setup, integrated, map(relaxation_hubble, here)),
+        )
