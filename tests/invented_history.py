@@ -16,6 +16,7 @@ from levelnet.history.result import (
     History,
     LineFigures,
     Milestones,
+    RadiationField,
     SpeciesPopulations,
 )
 from levelnet.history.setup import Grid, Setup
@@ -83,3 +84,31 @@ def invented_history(
         diagnostics=Diagnostics(1688.5, 3.1e-7, 812, 23, 4127, 40, 5.4e-10, 1.2e-14, 3.3e4),
         notes=notes,
     )
+
+
+def invented_field(
+    redshift: tuple[float, ...] = (1400.0, 1200.0, 1000.0, 800.0, 600.0),
+    frequency_step: float = 5e-4,
+) -> RadiationField:
+    """A field with a step at each Lyman line, wings, and free redshifting below; all invented.
+
+    Between lines u is what the line above gave when the universe was smaller by the ratio of the
+    photon energies; at a line it leads over to the line's own value, ln u = ((1600 - z)/250)^2,
+    within a Lorentzian of width 1e-3 over frequency.
+    """
+    lines = np.array([0.75, 8.0 / 9.0, 15.0 / 16.0]) * 13.598286
+    count = round(math.log(8.0 / 3.0) / frequency_step) + 1
+    energy = np.geomspace(0.375, 1.0, count) * 13.598286
+
+    def at_line(z: np.ndarray) -> np.ndarray:
+        return (np.clip(1600.0 - z, 0.0, None) / 250.0) ** 2
+
+    rows = []
+    for z in redshift:
+        above = np.searchsorted(lines, energy)
+        emitted = lines[np.minimum(above, len(lines) - 1)]
+        given = np.where(above < len(lines), at_line((1.0 + z) * emitted / energy - 1.0), 0.0)
+        offset = np.min(np.abs(energy[:, None] / lines - 1.0), axis=1)
+        share = 1.0 / (1.0 + (offset / 1e-3) ** 2)
+        rows.append(share * at_line(np.full_like(energy, z)) + (1.0 - share) * given)
+    return RadiationField(np.array(redshift), energy, np.array(rows))

@@ -13,7 +13,7 @@ from ..quantities import OBSERVABLES
 
 if TYPE_CHECKING:
     from ..arrays import FloatArray
-    from ..history.result import History
+    from ..history.result import Diagnostics, History, RadiationField
     from ..history.setup import Setup
 
 _SAMPLES = (1700.0, 1400.0, 1300.0, 1200.0, 1100.0, 1000.0, 800.0, 500.0, 200.0, 100.0, 50.0, 20.0)
@@ -139,7 +139,19 @@ def history_values(history: History) -> dict[str, Any]:
             zip(history.channels.names, history.channels.cumulative_share[-1], strict=True)
         ),
         "diagnostics": {name: getattr(how, name) for name in how.__slots__},
+        "field": _field_values(history.field),
         "notes": list(history.notes),
+    }
+
+
+def _field_values(field: RadiationField | None) -> dict[str, Any] | None:
+    if field is None:
+        return None
+    return {
+        "n_spectra": len(field.redshift),
+        "n_photon_energies": len(field.photon_energy_ev),
+        "redshift_range": field.redshift[[0, -1]],
+        "photon_energy_range_ev": field.photon_energy_ev[[0, -1]],
     }
 
 
@@ -165,7 +177,8 @@ def summary_text(history: History) -> str:
         "",
     ]
     body = [*_milestone_lines(history), "", *_sample_lines(history), "", *_share_lines(history)]
-    return "\n".join([*head, *body, "", *_diagnostic_lines(history), *_note_lines(history)])
+    how = [*_diagnostic_lines(history), *_frequency_lines(history.diagnostics)]
+    return "\n".join([*head, *body, "", *how, *_field_lines(history.field), *_note_lines(history)])
 
 
 def row(label: str, text: str) -> str:
@@ -247,6 +260,29 @@ def _diagnostic_lines(history: History) -> list[str]:
             f"{how.slowest_relaxation_hubble:.3g} Hubble rates (quasi-steady needs far above 1)",
         ),
     ]
+
+
+def _frequency_lines(how: Diagnostics) -> list[str]:
+    """Figures of a treatment that resolves the field in frequency; the others have none."""
+    if how.frequency_step <= 0.0:
+        return []
+    return [
+        row(
+            "frequency step",
+            f"{how.frequency_step:.2e} in ln nu, relative error of x_e from it "
+            f"{how.frequency_error:.1e} (estimate)",
+        ),
+        row("photon number error", f"{how.photon_number_error:.1e} in a step, largest"),
+        row("atom number error", f"{how.atom_number_error:.1e} in a step, largest"),
+    ]
+
+
+def _field_lines(field: RadiationField | None) -> list[str]:
+    if field is None:
+        return []
+    z, energy = field.redshift, field.photon_energy_ev
+    where = f"z = {z[0]:g} to {z[-1]:g}, {energy[0]:.2f} to {energy[-1]:.2f} eV"
+    return [row("spectra of the field", f"{len(z)}, {where} ({len(energy)} photon energies)")]
 
 
 def _note_lines(history: History) -> list[str]:

@@ -5,6 +5,8 @@ from __future__ import annotations
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
+import numpy as np
+
 from ..arrays import FloatArray, frozen_array
 from ..atomic.levels import LevelSet
 from ..errors import InputError, Outcome, SolveError
@@ -138,6 +140,19 @@ class RadiationField:
         frozen_array(self, "redshift", shape[:1])
         frozen_array(self, "photon_energy_ev", shape[1:])
         frozen_array(self, "log_distortion", shape)
+        if not (
+            np.all(np.diff(self.redshift) < 0.0) and np.all(np.diff(self.photon_energy_ev) > 0.0)
+        ):
+            raise ValueError("RadiationField: redshift must descend, photon_energy_ev ascend")
+
+    def to_xarray(self) -> xarray.Dataset:
+        """The field over redshift and photon energy as an xarray Dataset (needs the extra)."""
+        import xarray
+
+        return xarray.Dataset(
+            {"log_distortion": (("redshift", "photon_energy_ev"), self.log_distortion)},
+            coords={"redshift": self.redshift, "photon_energy_ev": self.photon_energy_ev},
+        )
 
 
 @dataclass(frozen=True, slots=True)
@@ -194,6 +209,13 @@ class Diagnostics:
     slowest_relaxation_hubble : float
         Slowest relaxation rate of the kept levels over the Hubble rate, smallest over the outputs;
         the quasi-steady assumption needs it far above 1.
+    photon_number_error, atom_number_error : float
+        Largest relative imbalance of the photon number and of the atom number over all steps; 0
+        where the line treatment carries no radiation field.
+    frequency_step : float
+        Step of the radiation field in ln(photon energy); 0 where there is none.
+    frequency_error : float
+        Relative error of x_e that this step leaves, an estimate; 0 where there is none.
     """
 
     handover_redshift: float
@@ -205,6 +227,10 @@ class Diagnostics:
     interpolation_error: float
     conservation_error: float
     slowest_relaxation_hubble: float
+    photon_number_error: float = 0.0
+    atom_number_error: float = 0.0
+    frequency_step: float = 0.0
+    frequency_error: float = 0.0
 
 
 _HISTORY_ARRAYS = (

@@ -13,11 +13,13 @@ from ..history.result import History
 from . import style
 from .departures import departure_curves_figure, departure_map_figure
 from .plots import channel_figure, history_figure, visibility_figure
+from .spectrum import spectrum_figure
 
 if TYPE_CHECKING:
     from matplotlib.figure import Figure
 
 FIGURE_NAMES = ("history", "departure-map", "departure-curves", "channels", "visibility")
+FIELD_FIGURE_NAME = "spectrum"  # only of a history that holds the radiation field
 
 
 def make_figures(history: History, redshift: float | None = None) -> dict[str, Figure]:
@@ -37,12 +39,18 @@ def make_figures(history: History, redshift: float | None = None) -> dict[str, F
         channel_figure(history),
         visibility_figure(history),
     )
-    return dict(zip(FIGURE_NAMES, made, strict=True))
+    figures = dict(zip(FIGURE_NAMES, made, strict=True))
+    return (
+        figures
+        if history.field is None
+        else figures | {FIELD_FIGURE_NAME: spectrum_figure(history)}
+    )
 
 
-def figure_paths(folder: str | Path) -> tuple[Path, ...]:
-    """Files that :func:`save_figures` writes into `folder`."""
-    return tuple(Path(folder) / f"{name}.{end}" for name in FIGURE_NAMES for end in style.FORMATS)
+def figure_paths(folder: str | Path, with_field: bool = False) -> tuple[Path, ...]:
+    """Files that :func:`save_figures` writes into `folder`, of a history with the field or not."""
+    names = (*FIGURE_NAMES, FIELD_FIGURE_NAME) if with_field else FIGURE_NAMES
+    return tuple(Path(folder) / f"{name}.{end}" for name in names for end in style.FORMATS)
 
 
 def save_figures(
@@ -79,7 +87,7 @@ def save_figures(
     OSError
         If a file cannot be written; none is left half-written.
     """
-    check_place(folder, figure_paths(folder), force)
+    check_place(folder, figure_paths(folder, history.field is not None), force)
     # Drawn in memory first, so that a figure that fails leaves nothing behind.
     return save_drawn(make_figures(history, redshift), folder, progress)
 

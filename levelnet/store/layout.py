@@ -141,6 +141,15 @@ DIAGNOSTICS = Group(
         _diagnostic(
             "slowest_relaxation_hubble", "slowest relaxation rate over the Hubble rate, smallest"
         ),
+        _diagnostic(
+            "photon_number_error",
+            "largest relative imbalance of the photons in a step; 0: no field",
+        ),
+        _diagnostic(
+            "atom_number_error", "largest relative imbalance of the atoms in a step; 0: no field"
+        ),
+        _diagnostic("frequency_step", "step of the field in ln of photon energy; 0: no field"),
+        _diagnostic("frequency_error", "relative error of x_e from the frequency step, estimated"),
     ),
 )
 
@@ -148,6 +157,31 @@ NOTES = Group(
     "notes",
     "what a user must know before relying on the result",
     (Variable("note", ("note",), "", "statements, in order", "notes", "text"),),
+)
+
+FIELD = Group(
+    "field",
+    "radiation field around the Lyman lines, where the line treatment resolves it",
+    (
+        # Not REDSHIFT: the field is kept at some of the outputs only.
+        Variable(
+            "redshift", ("redshift",), "1", "redshift of a spectrum, descending", "field.redshift"
+        ),
+        Variable(
+            "photon_energy",
+            ("photon_energy",),
+            "eV",
+            "photon energy from half of Lyman-alpha to the Lyman limit, ascending",
+            "field.photon_energy_ev",
+        ),
+        Variable(
+            "log_distortion",
+            ("redshift", "photon_energy"),
+            "1",
+            "natural logarithm of occupation number over that of the blackbody at T_r",
+            "field.log_distortion",
+        ),
+    ),
 )
 
 SPECIES_VARIABLES = (
@@ -202,15 +236,16 @@ HISTORY_LAYOUT = Layout(
     "a history",
     ROOT_ATTRIBUTES,
     FIXED_GROUPS,
-    tuple(species_group(name) for name in SPECIES_GROUPS),
+    (*(species_group(name) for name in SPECIES_GROUPS), FIELD),
 )
 
 
-def groups_of(species: tuple[str, ...]) -> tuple[Group, ...]:
-    """All groups of a file with these species, in the order of writing."""
-    return (HISTORY, *(species_group(name) for name in species), *FIXED_GROUPS[1:])
+def groups_of(species: tuple[str, ...], with_field: bool = False) -> tuple[Group, ...]:
+    """All groups of a file with these species, and the field or not, in the order of writing."""
+    some = (HISTORY, *(species_group(name) for name in species), *FIXED_GROUPS[1:])
+    return (*some, FIELD) if with_field else some
 
 
 def describe_layout() -> str:
     """Return the layout as text: one line for each group, dataset and attribute of the file."""
-    return describe(HISTORY_LAYOUT, groups_of(("H I",)))
+    return describe(HISTORY_LAYOUT, groups_of(("H I",), with_field=True))

@@ -16,6 +16,7 @@ from ..history.result import (
     History,
     LineFigures,
     Milestones,
+    RadiationField,
     SpeciesPopulations,
 )
 from ..history.setup import parse_setup
@@ -133,13 +134,14 @@ def history_of(content: Content) -> History:
     species = tuple(given["species"] for given in content.groups.values() if "species" in given)
     parts: dict[str, Any] = {}
     populations = []
-    for group in layout.groups_of(species):
+    for group in layout.groups_of(species, layout.FIELD.name in content.groups):
         fields = _fields(content, group)
         own = fields.pop("species", None)
         if own is not None:
             levels = LevelSet(**own.pop("levels"))
             populations.append(SpeciesPopulations(name=group.species, levels=levels, **own))
         parts |= fields
+    field = parts.pop("field", None)
     return History(
         setup=parse_setup(str(content.attributes["setup"]), "stored setup"),
         outcome=_outcome(content),
@@ -148,6 +150,7 @@ def history_of(content: Content) -> History:
         lines=LineFigures(**parts.pop("lines")),
         milestones=Milestones(**parts.pop("milestones")),
         diagnostics=Diagnostics(**parts.pop("diagnostics")),
+        field=None if field is None else RadiationField(**field),
         **parts,
     )
 
