@@ -38,6 +38,7 @@ def invented_history(
     n_redshifts: int = 12,
     lines: tuple[str, ...] = ("2p-1s", "3p-1s"),
     notes: tuple[str, ...] = ("No reionization is included.", "b\u2081 is rounded\nto nothing", ""),
+    field: RadiationField | None = None,
 ) -> History:
     """A history with random but physical-looking arrays; two milestones are NaN."""
     random = np.random.default_rng(20261201)
@@ -58,6 +59,7 @@ def invented_history(
     ways = ("2s-1s", *lines)
     count = len(ways)
     zero = np.zeros(n_redshifts)
+    of_field = () if field is None else (2.1e-13, 4.4e-14, 5e-2, 3.7e-5)
     return History(
         setup=invented_setup(n_redshifts),
         outcome=Outcome.CONVERGED,
@@ -81,8 +83,11 @@ def invented_history(
             lines, *(by(len(lines)) * scale for scale in (1e8, 1e-8, 1e-3, 1.0, 1e-3))
         ),
         milestones=Milestones(1089.7, 1087.2, math.nan, 1274.3, math.nan, 5.1e12),
-        diagnostics=Diagnostics(1688.5, 3.1e-7, 812, 23, 4127, 40, 5.4e-10, 1.2e-14, 3.3e4),
+        diagnostics=Diagnostics(
+            1688.5, 3.1e-7, 812, 23, 4127, 40, 5.4e-10, 1.2e-14, 3.3e4, *of_field
+        ),
         notes=notes,
+        field=field,
     )
 
 
@@ -112,3 +117,8 @@ def invented_field(
         share = 1.0 / (1.0 + (offset / 1e-3) ** 2)
         rows.append(share * at_line(np.full_like(energy, z)) + (1.0 - share) * given)
     return RadiationField(np.array(redshift), energy, np.array(rows))
+
+
+def history_with_field() -> History:
+    """An invented history that holds all that a result file can: the field too, coarse."""
+    return invented_history(field=invented_field(frequency_step=5e-2))

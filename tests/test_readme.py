@@ -58,7 +58,7 @@ def test_every_command_has_a_row_and_no_other() -> None:
 
 
 KINDS = {
-    "levelnet history": groups_of(("H I",)),  # helium has no levels yet
+    "levelnet history": groups_of(("H I",), with_field=True),  # helium has no levels yet
     **{
         kind.name: (*kind.required, *kind.optional)
         for kind in (LEVEL_LAYOUT, WEIGHING_LAYOUT, TABLE_LAYOUT, DISTILLED_LAYOUT)

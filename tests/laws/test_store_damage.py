@@ -26,7 +26,7 @@ from levelnet.store import layout, read, write
 from levelnet.store.digest import content_digest, seal
 from levelnet.store.read import read_content
 from levelnet.store.schema import Content, Stored
-from tests.invented_history import invented_history
+from tests.invented_history import history_with_field, invented_history
 
 ROOT = Path(__file__).resolve().parents[2]
 WRITE = sys.modules[write.__module__]  # its name in the package is that of the function
@@ -40,7 +40,7 @@ def folder(tmp_path_factory: pytest.TempPathFactory) -> Path:
 
 @pytest.fixture(scope="module")
 def whole(folder: Path) -> bytes:
-    write(invented_history(), folder / "whole.h5")
+    write(history_with_field(), folder / "whole.h5")
     return (folder / "whole.h5").read_bytes()
 
 
@@ -186,7 +186,7 @@ def test_damage_under_a_right_seal_is_never_believed(whole: bytes, folder: Path)
 
 
 def all_variables() -> list[str]:
-    groups = layout.groups_of(("H I",))
+    groups = layout.groups_of(("H I",), with_field=True)
     return [f"{group.name}/{one.name}" for group in groups for one in group.variables]
 
 
@@ -326,6 +326,22 @@ HOSTILE: dict[str, tuple[Callable[[h5py.File], Any], str]] = {
     "version as array": (lambda f: f.attrs.__setitem__("layout_version", [1, 1]), "neither"),
     "missing dataset": (lambda f: f.__delitem__("hydrogen/n"), "hydrogen/n is missing"),
     "missing group": (lambda f: f.__delitem__("lines"), "lines is missing"),
+    "missing part of the field": (
+        lambda f: f.__delitem__("field/log_distortion"),
+        "field/log_distortion is missing",
+    ),
+    "field of a wrong length": (
+        lambda f: replaced(f, "field/log_distortion", data=np.zeros((5, 3))),
+        r"shape \(5, 3\), expected \(5, \d+\)",
+    ),
+    "energies without units": (
+        lambda f: f["field/photon_energy"].attrs.__delitem__("units"),
+        "missing or unknown: units",
+    ),
+    "missing diagnostic": (
+        lambda f: f.__delitem__("diagnostics/photon_number_error"),
+        "diagnostics/photon_number_error is missing",
+    ),
     "group for dataset": (
         lambda f: (f.__delitem__("hydrogen/n"), f.create_group("hydrogen/n")),
         "damaged",
@@ -475,6 +491,16 @@ def test_groups_must_have_one_redshift(folder: Path) -> None:
     content.variables["lines/redshift"] = shifted
     save_with_right_digest(content, folder / "redshift.h5")
     assert "redshift of group lines differs" in refusal(folder / "redshift.h5")
+
+
+@pytest.mark.parametrize("name", ["redshift", "photon_energy"])
+def test_field_must_be_in_order(name: str, folder: Path) -> None:
+    content = WRITE.content_of(history_with_field())
+    stored: Any = content.variables[f"field/{name}"]
+    turned = dataclasses.replace(stored, values=stored.values[::-1].copy())
+    content.variables[f"field/{name}"] = turned
+    save_with_right_digest(content, folder / "order.h5")
+    assert "does not make a history: RadiationField: redshift must" in refusal(folder / "order.h5")
 
 
 def test_records_must_fit_together(folder: Path) -> None:

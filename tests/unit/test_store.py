@@ -35,10 +35,11 @@ from levelnet.store import (
     whole_file,
     write,
 )
-from tests.invented_history import invented_history
+from tests.invented_history import history_with_field, invented_history
+from tests.same_records import assert_same
 
 ROOT = Path(__file__).resolve().parents[2]
-GROUPS = ["history", "hydrogen", "lines", "channels", "milestones", "diagnostics", "notes"]
+GROUPS = ["history", "hydrogen", "lines", "channels", "milestones", "diagnostics", "notes", "field"]
 
 
 def leaves(record: Any, name: str = "") -> Iterator[tuple[str, Any]]:
@@ -69,7 +70,7 @@ def names_in(folder: Path) -> list[str]:
 
 @pytest.fixture(scope="module")
 def history() -> History:
-    return invented_history()
+    return history_with_field()
 
 
 @pytest.fixture(scope="module")
@@ -84,7 +85,7 @@ def stored(history: History, tmp_path_factory: pytest.TempPathFactory) -> Path:
 
 def test_comes_back_to_the_bit(history: History, stored: Path) -> None:
     before, after = dict(leaves(history)), dict(leaves(read(stored)))
-    assert len(before) == 50
+    assert len(before) == 57
     assert {path: bits(value) for path, value in after.items()} == {
         path: bits(value) for path, value in before.items()
     }
@@ -181,12 +182,24 @@ def test_big_arrays_in_several_chunks(tmp_path: Path) -> None:
     assert bits(read(tmp_path / "h.h5").populations("H I")) == bits(wide)
 
 
+def test_field_comes_back_or_is_not_there(history: History, tmp_path: Path) -> None:
+    write(history, tmp_path / "with.h5")
+    assert_same(read(tmp_path / "with.h5").field, history.field)
+    write(invented_history(), tmp_path / "without.h5")
+    assert read(tmp_path / "without.h5").field is None
+    with h5py.File(tmp_path / "without.h5") as file:
+        assert "field" not in file
+
+
 # ---- layout
 
 
 def test_layout_has_every_field_of_the_records(history: History) -> None:
     listed = {
-        one.field for group in layout.groups_of(("H I",)) for one in group.variables if one.field
+        one.field
+        for group in layout.groups_of(("H I",), with_field=True)
+        for one in group.variables
+        if one.field
     }
     fields = {path.replace("species.0.", "species.") for path, _ in leaves(history)}
     assert listed == fields - {"setup", "outcome", "species.name"}
@@ -196,7 +209,7 @@ def test_file_is_as_the_layout_says(stored: Path) -> None:
     with h5py.File(stored) as file:
         assert sorted(file) == sorted(GROUPS)
         assert set(file.attrs) == set(layout.ROOT_ATTRIBUTES)
-        for group in layout.groups_of(("H I",)):
+        for group in layout.groups_of(("H I",), with_field=True):
             assert sorted(file[group.name]) == sorted(one.name for one in group.variables)
             for one in group.variables:
                 dataset = file[group.name][one.name]
@@ -225,7 +238,7 @@ def test_units_can_be_read() -> None:
     readable = {"1", "K", "cm-3", "s-1", "s", "megaparsec-1", "eV"}
     used = {
         one.units
-        for group in layout.groups_of(("H I",))
+        for group in layout.groups_of(("H I",), with_field=True)
         for one in group.variables
         if one.kind != "text"
     }
@@ -234,7 +247,7 @@ def test_units_can_be_read() -> None:
 
 def test_description_names_everything() -> None:
     text = describe_layout()
-    for group in layout.groups_of(("H I",)):
+    for group in layout.groups_of(("H I",), with_field=True):
         assert f"group {group.name}: " in text
         for one in group.variables:
             assert f" {one.name}" in text
@@ -244,7 +257,9 @@ def test_description_names_everything() -> None:
     assert text.isascii()
 
 
-@pytest.mark.parametrize("group", layout.groups_of(("H I",)), ids=lambda group: group.name)
+@pytest.mark.parametrize(
+    "group", layout.groups_of(("H I",), with_field=True), ids=lambda group: group.name
+)
 def test_each_group_opens_alone_in_xarray(
     group: layout.Group, history: History, stored: Path
 ) -> None:
@@ -256,7 +271,9 @@ def test_each_group_opens_alone_in_xarray(
         for dimension in data.sizes:
             assert dimension in data.coords
         if "redshift" in data.sizes:
-            assert bits(data["redshift"].to_numpy()) == bits(history.redshift)
+            own = history.field if group is layout.FIELD else history
+            assert own is not None
+            assert bits(data["redshift"].to_numpy()) == bits(own.redshift)
 
 
 def test_xarray_gives_names_and_selects_by_them(history: History, stored: Path) -> None:
@@ -272,6 +289,12 @@ def test_xarray_gives_names_and_selects_by_them(history: History, stored: Path) 
         one = data["population"].where((data["n"] == 3) & (data["l"] == 1), drop=True)
         expected = history.populations("H I")[:, history.levels("H I").index(3, 1)]
         assert bits(one.to_numpy()[:, 0]) == bits(expected)
+    with xarray.open_dataset(stored, engine="h5netcdf", group="field") as data:
+        field = history.field
+        assert field is not None
+        one = data["log_distortion"].sel(redshift=1000.0).sel(photon_energy=10.2, method="nearest")
+        nearest = np.argmin(np.abs(field.photon_energy_ev - 10.2))
+        assert float(one) == field.log_distortion[2, nearest]
     with xarray.open_dataset(stored, engine="h5netcdf", group="notes") as data:
         assert tuple(data["note"].to_numpy().tolist()) == history.notes
     with xarray.open_dataset(stored, engine="h5netcdf", group="milestones") as data:
@@ -318,8 +341,8 @@ def test_no_time_and_no_machine(history: History, stored: Path, tmp_path: Path) 
     write(read(stored), tmp_path / "copy.h5")
     program = (
         "import sys; from levelnet.store import write\n"
-        "from tests.invented_history import invented_history\n"
-        "write(invented_history(), sys.argv[1])"
+        "from tests.invented_history import history_with_field\n"
+        "write(history_with_field(), sys.argv[1])"
     )
     run_python(program, str(tmp_path / "other_process.h5"), hash_seed="77")
     first = stored.read_bytes()
@@ -422,8 +445,8 @@ LIMITED = """
 import json, resource, sys
 from levelnet.errors import LevelnetError
 from levelnet.store import write
-from tests.invented_history import invented_history
-history, said = invented_history(), []
+from tests.invented_history import history_with_field
+history, said = history_with_field(), []
 for limit in map(int, sys.argv[2:]):
     # The system refuses to let a file grow beyond the limit, as a full disk does.
     resource.setrlimit(resource.RLIMIT_FSIZE, (limit, resource.RLIM_INFINITY))
@@ -501,9 +524,9 @@ def test_failure_at_any_stage_leaves_nothing(
 KILLED = """
 import os, signal, sys
 from levelnet.store import write
-from tests.invented_history import invented_history
+from tests.invented_history import history_with_field
 os.fsync = lambda _: os.kill(os.getpid(), signal.SIGKILL)
-write(invented_history(), sys.argv[1], force=True)
+write(history_with_field(), sys.argv[1], force=True)
 """
 
 
