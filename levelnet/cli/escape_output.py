@@ -10,11 +10,13 @@ from ..quantities import OBSERVABLES
 from .output import aligned, field_values, plain_values, row
 
 if TYPE_CHECKING:
+    from ..arrays import FloatArray
     from ..studies.escape_records import EscapeStudy
     from ..studies.escape_verdict import EscapeDemands, EscapeVerdict
 
 # Redshifts at which the effects of the switches are set side by side.
 _SAMPLES = (1300.0, 1100.0, 900.0)
+_WAYS = ("first", "last", "in order")
 
 
 def escape_values(
@@ -131,38 +133,52 @@ def _table(rows: list[tuple[str, ...]]) -> list[str]:
 
 
 def _switch_lines(study: EscapeStudy, found: EscapeVerdict) -> list[str]:
-    """What adding each switch does to x_e: as the first, as the last, and in order."""
+    """What adding each switch does to x_e, the largest, then at some redshifts."""
+    from ..studies.escape_verdict import switch_effects
+
+    effects = switch_effects(study)
+    curves = dict(zip(_WAYS, (effects.first, effects.last, effects.in_order), strict=True))
+    return [
+        f"change of x_e (%) by adding each switch, the largest at {found.low:g} < z < "
+        f"{found.high:g}: first (to none), last (to",
+        "all others), in order (to those above it); what a switch needs comes with it, what needs "
+        "it goes with it",
+        *_table(_largest_effects(study, found, curves)),
+        "",
+        *_table(_sampled_effects(study, curves)),
+    ]
+
+
+def _largest_effects(
+    study: EscapeStudy, found: EscapeVerdict, curves: dict[str, FloatArray]
+) -> list[tuple[str, ...]]:
     import numpy as np
 
-    from ..studies.escape_verdict import switch_effects, worse_than_absent
+    from ..studies.escape_verdict import worse_than_absent
     from ..studies.verdict import outputs_between
 
-    effects, z = switch_effects(study), study.redshift
-    inside = outputs_between(z, 1.0, found.low, found.high)
-    samples = [int(np.argmin(np.abs(z - one))) for one in _SAMPLES if z[-1] <= one <= z[0]]
-    curves = (effects.first, effects.last, effects.in_order)
+    inside = outputs_between(study.redshift, 1.0, found.low, found.high)
     worse = {one.name for one in worse_than_absent(study, found.low, found.high)}
-    head = (
-        "switch",
-        *("first, largest", "last, largest", "in order, largest"),
-        *(f"at z = {z[k]:.0f}: first / last / in order" for k in samples),
-        "",
-    )
-    body = []
+    rows = [("switch", *curves, "")]
     for k, name in enumerate(study.switches.name):
         cells = []
-        for curve in curves:
+        for curve in curves.values():
             place = inside[int(np.argmax(np.abs(curve[k, inside])))]
-            cells.append(f"{100.0 * curve[k, place]:+.3f} at {z[place]:.0f}")
-        cells += [" / ".join(f"{100.0 * c[k, at]:+.3f}" for c in curves) for at in samples]
+            cells.append(f"{100.0 * curve[k, place]:+.3f} at z = {study.redshift[place]:.0f}")
         alone = study.variants.name[study.switches.alone[k]]
-        body.append((name, *cells, "WORSE THAN ABSENT" if alone in worse else ""))
-    return [
-        f"change of x_e (%) by adding each switch, {found.low:g} < z < {found.high:g}: to none "
-        "(first), to all others (last),",
-        "to those above it (in order); absorption comes and goes with stimulated as the notes say",
-        *_table([head, *body]),
-    ]
+        rows.append((name, *cells, "WORSE ALONE THAN ABSENT" if alone in worse else ""))
+    return rows
+
+
+def _sampled_effects(study: EscapeStudy, curves: dict[str, FloatArray]) -> list[tuple[str, ...]]:
+    z = study.redshift
+    places = [int(abs(z - one).argmin()) for one in _SAMPLES if z[-1] <= one <= z[0]]
+    heads = [(f"z = {z[k]:.0f}" if way == _WAYS[0] else "", way) for k in places for way in curves]
+    rows = [("", *(place for place, _ in heads)), ("switch", *(way for _, way in heads))]
+    for k, name in enumerate(study.switches.name):
+        cells = [f"{100.0 * curve[k, at]:+.3f}" for at in places for curve in curves.values()]
+        rows.append((name, *cells))
+    return rows
 
 
 def _share_lines(study: EscapeStudy) -> list[str]:

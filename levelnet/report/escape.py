@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import dataclasses
 from collections.abc import Callable, Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -9,12 +10,15 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from ..arrays import FloatArray
+from ..atomic.levels import hydrogenic_levels
+from ..atomic.physics import scales
 from ..studies.escape_notes import asked_range
 from ..studies.escape_records import EscapeStudy
 from ..studies.escape_verdict import differences, switch_effects
 from . import style
 from .figures import check_place, save_drawn
 from .plots import shares_figure
+from .spectrum import field_figure
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
@@ -23,6 +27,7 @@ if TYPE_CHECKING:
 _NAMES = ("escape", "escape-switches", "escape-channels")
 _SPECTRUM = "escape-spectrum"  # only of a reference that resolves the field
 _SPECTRA_AT = (1500.0, 1300.0, 1100.0, 900.0, 700.0)
+_MARKED_N = 10  # Lyman lines are marked up to this n
 # Differences beyond are those of treatments that are no more than bounds.
 _NEAR = 0.1
 
@@ -170,13 +175,19 @@ def escape_spectrum_figure(study: EscapeStudy) -> Figure:
     Returns
     -------
     matplotlib Figure
-        log10 of u, the occupation number over that of the blackbody, against the relative distance
-        from Lyman-alpha in frequency (dimensionless). Left: to +-0.25; right: to +-0.01.
+        As of :func:`levelnet.report.spectrum.field_figure`.
     """
-    from ..atomic.levels import transition_energy_ev  # noqa: F401
-    from .spectrum import draw_spectrum
-
-    raise NotImplementedError(draw_spectrum)
+    assert study.field is not None
+    hydrogen, unit = study.setup.hydrogen, scales(study.setup.physics).energy
+    levels = hydrogenic_levels(min(hydrogen.n_max, _MARKED_N), hydrogen.energies)
+    levels = dataclasses.replace(
+        levels,
+        energy_ev=levels.energy_ev * unit,
+        ionization_energy_ev=levels.ionization_energy_ev * unit,
+    )
+    high, low = float(study.field.redshift[0]), float(study.field.redshift[-1])
+    shown = [z for z in _SPECTRA_AT if low <= z <= high]
+    return field_figure(study.field, levels, shown or None)
 
 
 def _draw(
@@ -190,9 +201,7 @@ def _draw(
     for curve, label, k in zip(values, labels, looks, strict=True):
         dash: Any = style.DASHES[k % len(style.DASHES)]
         colour = style.SERIES[k % len(style.SERIES)]
-        axes.plot(
-            study.redshift, curve, color=colour, linestyle=dash, linewidth=1.2, label=label
-        )
+        axes.plot(study.redshift, curve, color=colour, linestyle=dash, linewidth=1.2, label=label)
     axes.axhline(0.0, color=style.GREY, linewidth=0.6, zorder=0)
     low, high = asked_range(study)
     axes.set_xlim(low, high)

@@ -41,22 +41,20 @@ def verdict_texts(study: EscapeStudy, found: EscapeVerdict) -> tuple[str, ...]:
 def _enough_text(found: EscapeVerdict) -> str:
     goal = f"for {percent(found.within)} in x_e at {found.low:g} <= z <= {found.high:g}: "
     own = found.candidates[-1]
-    limit = f"numerical error of the reference, at most {percent(own.error)}, counted"
+    reference = f"the numerical error of the reference, {percent(own.error)} at most,"
     if found.enough is None:
         closest = min(found.candidates, key=lambda one: one.error)
         return (
-            f"{goal}none of those compared ({closest.name} comes closest, "
-            f"{percent(closest.error)} at z = {closest.redshift:.0f}; {limit}); "
-            "a finer frequency step is needed"
+            f"{goal}none of those compared: {closest.name} comes closest with "
+            f"{percent(closest.error)} at z = {closest.redshift:.0f}, {reference} counted; "
+            "ask for less, or for a finer frequency step"
         )
     one = found.candidates[found.enough]
     if one.variant == own.variant:
-        return (
-            f"{goal}you need {one.name} with all switches (its {limit.removesuffix(', counted')})"
-        )
+        return f"{goal}you need all of {one.name}; {reference} is within"
     text = (
-        f"{goal}{one.name} is enough ({percent(one.error)} at z = {one.redshift:.0f}, where it "
-        f"errs most; {limit})"
+        f"{goal}{one.name} is enough; it errs by {percent(one.error)} at most, at z = "
+        f"{one.redshift:.0f}, {reference} counted"
     )
     if found.relapse is not None:
         more = found.candidates[found.relapse]

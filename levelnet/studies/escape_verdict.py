@@ -140,7 +140,8 @@ def largest_difference(study: EscapeStudy, variant: int, low: float, high: float
 def candidates_of(study: EscapeStudy) -> tuple[int, ...]:
     """Positions of the variants that a user would choose, from the simplest on."""
     switches = study.switches
-    return (*study.treatments.tolist(), switches.base, *switches.cumulative.tolist())
+    every = (*study.treatments.tolist(), switches.base, *switches.cumulative.tolist())
+    return tuple(dict.fromkeys(every))
 
 
 def escape_verdict(study: EscapeStudy, within: float, low: float, high: float) -> EscapeVerdict:
@@ -170,9 +171,9 @@ def escape_verdict(study: EscapeStudy, within: float, low: float, high: float) -
         place = float(study.redshift[inside][worst])
         found.append(Candidate(study.variants.name[k], k, error, place, error <= within))
     enough = next((k for k, one in enumerate(found) if one.passed), None)
-    first_set = len(study.treatments)
-    later = range(max(enough + 1, first_set), len(found)) if enough is not None else ()
-    relapse = next((k for k in later if not found[k].passed), None)
+    sets = set(study.switches.cumulative.tolist())
+    later = range(len(found) if enough is None else enough + 1, len(found))
+    relapse = next((k for k in later if found[k].variant in sets and not found[k].passed), None)
     return EscapeVerdict(within, low, high, tuple(found), enough, relapse)
 
 
