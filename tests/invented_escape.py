@@ -5,6 +5,8 @@ from __future__ import annotations
 import dataclasses
 from functools import lru_cache
 
+import numpy as np
+
 from levelnet.escape.lines import Lines
 from levelnet.history.setup import Setup
 from levelnet.studies.escape import run_plan
@@ -43,3 +45,26 @@ def cheap_study() -> EscapeStudy:
     """A study of a small atom, its last output at z = 200."""
     setup = small_setup(6, 200.0, 20, lines={"lyman_lines": 3})
     return run_plan(setup, cheap_plan(setup))
+
+
+def with_differences(peaks: dict[str, float], own: float = 1e-6) -> EscapeStudy:
+    """The cheap study with invented curves.
+
+    Variant `name` differs from the reference by peaks[name] at one output, that nearest to z =
+    1000, and not at all elsewhere; `own` is the numerical error of the reference everywhere.
+    """
+    study = cheap_study()
+    row = int(np.argmin(np.abs(study.redshift - 1000.0)))
+    fractions = np.tile(
+        study.variants.free_electron_fraction[study.reference], (len(study.variants.name), 1)
+    )
+    for name, peak in peaks.items():
+        fractions[study.variants.name.index(name), row] *= 1.0 + peak
+    error = study.reference_error
+    return dataclasses.replace(
+        study,
+        variants=dataclasses.replace(study.variants, free_electron_fraction=fractions),
+        reference_error=dataclasses.replace(
+            error, free_electron_fraction=np.full(len(study.redshift), own)
+        ),
+    )

@@ -162,8 +162,9 @@ def _assemble(setup: Setup, plan: Plan, results: list[VariantResult]) -> EscapeS
             np.array(plan.cumulative),
         ),
         _numerical_error(reference, coarser, setup.accuracy.relative),
-        reference.channels,
-        reference.field,
+        # Made anew: arrays from another process are no longer read-only.
+        dataclasses.replace(reference.channels),
+        None if reference.field is None else dataclasses.replace(reference.field),
     )
 
 
