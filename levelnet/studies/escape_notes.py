@@ -102,9 +102,24 @@ def escape_notes(study: EscapeStudy) -> tuple[str, ...]:
         f"errors are differences from the reference, {study.variants.name[study.reference]}, whose "
         f"own numerical error of x_e is at most {percent(own)} there; what its physics leaves out "
         "(collisions, helium, lines above lyman_lines) is in none of them",
+        *_check_notes(study, low, high),
         *_line_notes(study),
         "effects of single switches depend on which others are on: first, last and in order are "
         "all right, each for its question",
+    )
+
+
+def _check_notes(study: EscapeStudy, low: float, high: float) -> tuple[str, ...]:
+    """Without any switch the reference is Sobolev's treatment: what numerics make of that."""
+    name, base = "Sobolev", study.switches.base
+    if name not in study.variants.name or study.variants.name[base] == name:
+        return ()
+    inside = outputs_between(study.redshift, 1.0, low, high)
+    x_e = study.variants.free_electron_fraction[:, inside]
+    miss = float(np.max(np.abs(x_e[base] / x_e[study.variants.name.index(name)] - 1.0)))
+    return (
+        f"check: {study.variants.name[base]} and {name}, the same physics, differ by at most "
+        f"{percent(miss)} in x_e there",
     )
 
 
