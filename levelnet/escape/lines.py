@@ -6,6 +6,8 @@ from pydantic import AfterValidator, BeforeValidator, Field, ValidationInfo
 
 from ..records import checked_record, from_mapping
 
+RAMAN_LEVELS = ((2, 0), (3, 0), (3, 2))
+"""(n, l) of the levels with Raman scattering; higher ones have far smaller populations."""
 TWO_PHOTON_N_MAX = 10
 """Highest n of ns and nd levels whose two-photon spectra are known."""
 COARSEST_STEP = 0.01
@@ -110,3 +112,16 @@ class Lines:
             )
         if self.transfer is not None:
             raise ValueError('transfer: only with hydrogen = "transfer"')
+
+    @property
+    def field_levels(self) -> tuple[tuple[int, int], ...]:
+        """(n, l) of the levels that a resolved field talks to apart from the lines, in order."""
+        if self.transfer is None:
+            return ()
+        found = {(2, 0)} if self.two_photon == "distorted" else set()
+        if self.transfer.raman:
+            found |= set(RAMAN_LEVELS)
+        if self.transfer.excited_two_photon:
+            top = self.transfer.highest_two_photon_n
+            found |= {(n, l) for n in range(3, top + 1) for l in (0, 2)}
+        return tuple(sorted(found))

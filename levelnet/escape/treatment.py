@@ -10,7 +10,6 @@ import numpy as np
 from .. import constants as const
 from ..arrays import FloatArray, IntArray, frozen_array
 from ..background.conditions import Conditions
-from ..errors import InputError
 from ..network.coupling import GroundCoupling, blackbody_coupling
 from ..network.reduced import KeptLevels
 from ..network.solve import log_boltzmann_populations
@@ -253,15 +252,3 @@ class SobolevFeedback(Sobolev):
             excess_by_ground=ground,
             excess_by_time=time,
         )
-
-
-TREATMENTS: tuple[LineTreatment, ...] = (Closed(), Open(), Sobolev(), SobolevFeedback())
-
-
-def treatment(name: str) -> LineTreatment:
-    """The member of the family with this name."""
-    for member in TREATMENTS:
-        if member.name == name:
-            return member
-    known = ", ".join(f'"{member.name}"' for member in TREATMENTS)
-    raise InputError(f'lines.hydrogen = "{name}": known are {known}')

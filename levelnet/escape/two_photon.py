@@ -37,8 +37,9 @@ def with_two_photon(
         Temperatures and fractions.
     rate_per_s : float, s^-1
         Spontaneous rate.
-    mode : "spontaneous" or "stimulated"
-        Without or with stimulation by the blackbody.
+    mode : "spontaneous", "stimulated" or "distorted"
+        Without or with stimulation by the blackbody; nothing is added where the coupling of the
+        lines holds the channel already.
 
     Returns
     -------
@@ -50,6 +51,8 @@ def with_two_photon(
     ----------
     Chluba & Sunyaev 2006, Astron. Astrophys. 446, 39 (stimulated decay).
     """
+    if mode == "distorted":
+        return coupling
     slope = 0.0
     if mode == "stimulated":
         at = conditions.radiation_temperature_k, float(kept.energy_ev[0])

@@ -23,6 +23,7 @@ import numpy as np
 from .. import constants as const
 from ..arrays import FloatArray
 from ..atomic.physics import UNCHANGED, Scales
+from ..atomic.two_photon import stimulated_two_photon_factor
 from ..background.conditions import Conditions
 from ..background.cosmology import Cosmology
 from ..background.matter import compton_rate_per_s
@@ -118,7 +119,7 @@ class SlowEquations:
     two_photon_rate_per_s : float, s^-1
         Spontaneous 2s-1s rate.
     two_photon_mode : str
-        "spontaneous" or "stimulated".
+        "spontaneous" or "stimulated"; "distorted" where the treatment holds the decay of 2s.
     scales : Scales
         What changed constants do to Compton scattering and to Saha equilibrium; rates, energies and
         lines above hold it already.
@@ -137,6 +138,14 @@ class SlowEquations:
     scales: Scales = UNCHANGED
     escape_factor: FloatArray | None = None
     past: Past | None = None
+
+    def decay_rate_per_s(self, radiation_temperature_k: float) -> float:
+        """2s-1s rate, stimulated by the blackbody if the setup says so."""
+        rate = self.two_photon_rate_per_s
+        if self.two_photon_mode == "spontaneous":
+            return rate
+        gap_ev = float(self.reduced.kept.energy_ev[0])
+        return rate * float(stimulated_two_photon_factor(radiation_temperature_k, gap_ev))
 
     def background(self, log_scale: float) -> Background:
         """Background quantities at s = ln a."""

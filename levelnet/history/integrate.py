@@ -11,8 +11,9 @@ import numpy as np
 from ..arrays import FloatArray
 from ..atomic.physics import scales
 from ..escape.blue_side import Past
+from ..escape.family import treatment as member
+from ..escape.resolved import ResolvedField
 from ..escape.treatment import LineTreatment
-from ..escape.treatment import treatment as member
 from ..network.ladder import Ladder
 from ..network.reduced import Reduced
 from ..network.scaled import with_scales
@@ -22,6 +23,7 @@ from ..pieces import Pieces, code_digest, content_key
 from .atom import build_ladder, open_lyman_lines, resonance_lines
 from .cost import table_tolerance
 from .equations import SlowEquations
+from .field import FieldRun, resolve_field
 from .setup import Setup
 from .start import Handover, equilibrium_state, find_handover
 
@@ -31,6 +33,9 @@ Progress = Callable[[str, float], None]
 # errors hardly add up: with 1.0 the neutral fraction was measured to 0.6 and x_e to 0.03 of what is
 # asked.
 _LOCAL = 0.5
+# A march with a field, which takes equal steps, starts where the lag is so small; the reference
+# that tells it T_m is integrated to this accuracy.
+_FIELD_LAG, _REFERENCE = 1e-5, 1e-5
 # Size of the atom that finds the hand-over: it depends on the lowest levels only.
 _SCOUT_N = 6
 
@@ -53,6 +58,8 @@ class Integrated:
         Accepted steps from the hand-over down; time is ln a.
     measured : Reduced
         The reduced network with the measured constants; `equations` holds it with the setup's.
+    field : FieldRun or None
+        The march behind it, where the treatment resolves the field.
     """
 
     equations: SlowEquations
@@ -61,6 +68,7 @@ class Integrated:
     redshift: FloatArray
     trajectory: Trajectory
     measured: Reduced
+    field: FieldRun | None = None
 
 
 def integrate_history(
@@ -88,7 +96,7 @@ def integrate_history(
     handover = setup_handover(setup, chosen)
     if start_above > handover.redshift:
         handover = Handover(start_above, handover.departure)
-    ladder = build_ladder(setup, keeps=(*chosen.keeps, *keeps))
+    ladder = build_ladder(setup, keeps=(*chosen.keeps, *setup.lines.field_levels, *keeps))
     redshift = output_redshifts(setup)
     factor = scales(setup.physics)
     reduced: Reduced = live_reduction(ladder)
@@ -96,6 +104,9 @@ def integrate_history(
         span = min(redshift[-1], handover.redshift), max(redshift[0], handover.redshift)
         reduced = _table(setup, ladder, span, tell, pieces)
     equations = slow_equations(setup, with_scales(reduced, factor), chosen)
+    if isinstance(chosen, ResolvedField):
+        run = march_field(setup, equations, handover, redshift, tell)
+        return Integrated(run.equations, ladder, handover, redshift, run.trajectory, reduced, run)
     trajectory = integrate_slow(setup, equations, handover, redshift, tell)
     return Integrated(equations, ladder, handover, redshift, trajectory, reduced)
 
@@ -105,7 +116,38 @@ def setup_handover(setup: Setup, chosen: LineTreatment | None = None) -> Handove
     keeps = () if chosen is None else chosen.keeps
     scout = build_ladder(setup, min(setup.hydrogen.n_max, _SCOUT_N), keeps)
     reduced = with_scales(live_reduction(scout), scales(setup.physics))
-    return find_handover(slow_equations(setup, reduced, chosen), 0.1 * setup.accuracy.relative)
+    lag = 0.1 * setup.accuracy.relative
+    equations = slow_equations(setup, reduced, chosen)
+    if isinstance(equations.treatment, ResolvedField):
+        lag = max(lag, _FIELD_LAG)
+    return find_handover(equations, lag)
+
+
+def march_field(
+    setup: Setup,
+    equations: SlowEquations,
+    handover: Handover,
+    redshift: FloatArray,
+    tell: Progress,
+) -> FieldRun:
+    """Integrate with the field: first without it, to know T_m, then everything together.
+
+    Parameters
+    ----------
+    setup, equations, handover
+        The run, its equations while the field is a blackbody, and where it starts.
+    redshift : ndarray, shape (n_redshift,), dimensionless
+        Output redshifts, descending.
+    tell : callable
+        Progress.
+    """
+    accuracy = replace(setup.accuracy, relative=max(setup.accuracy.relative, _REFERENCE))
+    rough = replace(setup, accuracy=accuracy)
+    reference = integrate_slow(rough, equations, handover, redshift, lambda *_: None)
+    tell("radiation field", 0.0)
+    run = resolve_field(setup, equations, reference, redshift)
+    tell("radiation field", 1.0)
+    return run
 
 
 def slow_equations(
@@ -132,7 +174,8 @@ def slow_equations(
         lines,
         treatment,
         setup.two_photon_rate_per_s * factor.two_photon_rate,
-        setup.lines.two_photon,
+        # The field absorbs what it has of 1s -> 2s: nothing, while it is a blackbody.
+        "stimulated" if setup.lines.two_photon == "distorted" else setup.lines.two_photon,
         replace(factor, compton_rate=factor.compton_rate * setup.rates.compton_factor),
         setup.rates.escape_factors(reduced.kept.n[lines.upper]),
         Past.of(lines.energy_ev) if remembers else None,

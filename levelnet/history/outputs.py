@@ -99,6 +99,7 @@ def assemble_history(
         marks,
         _diagnostics(integrated, outputs, slowest),
         notes,
+        None if integrated.field is None else integrated.field.field,
     )
 
 
@@ -277,4 +278,11 @@ def _diagnostics(integrated: Integrated, outputs: list[_Output], slowest: float)
         error,
         max((o.levels.conservation_error for o in outputs), default=0.0),
         slowest,
+        **_field_figures(integrated),
     )
+
+
+def _field_figures(integrated: Integrated) -> dict[str, float]:
+    run = integrated.field
+    names = "photon_number_error", "atom_number_error", "frequency_step", "frequency_error"
+    return {} if run is None else {name: getattr(run, name) for name in names}

@@ -17,6 +17,13 @@ from ..atomic.selection import AtomSize
 from ..atomic.species import Helium, Hydrogen
 from ..background.cosmology import Cosmology
 from ..errors import InputError
+from ..escape.frequency_step import (
+    COLDEST_FIELD_K,
+    chosen_step,
+    coarsest_step,
+    fitted_step,
+    highest_line,
+)
 from ..escape.lines import Lines
 from ..records import build, checked_record, from_mapping
 from ..texts import read_text
@@ -139,15 +146,48 @@ class Setup:
             )
         self.rates.check(self.atom_size)
         self._check_feedback()
+        self._check_transfer()
         self._check_overrides_act()
 
     def _check_feedback(self) -> None:
         """Refuse feedback among so many lines that steps shorter than its delays take for ever."""
         count = self.atom_size.lyman_lines
-        if self.lines.hydrogen == "sobolev_feedback" and count > _MOST_FED_LINES:
+        remembers = self.lines.hydrogen in {"sobolev_feedback", "transfer"}
+        if remembers and count > _MOST_FED_LINES:
             raise ValueError(
                 f"lines.lyman_lines: {count} lines with feedback; allowed are 1 to "
                 f"{_MOST_FED_LINES}: further ones change x_e by about 1e-6 in all"
+            )
+
+    def _check_transfer(self) -> None:
+        """Refuse what a resolved field cannot do."""
+        if self.lines.transfer is None:
+            return
+        top, step = self.hydrogen.highest_resolved, self.frequency_step
+        needed = max((n for n, _ in self.lines.field_levels), default=2)
+        if needed > top:
+            raise ValueError(
+                f"lines.transfer: needs levels up to n = {needed} resolved in l, and "
+                f"hydrogen.n_max or resolve_l_to = {top}; lower highest_two_photon_n, or set "
+                "excited_two_photon and raman to false"
+            )
+        limit = coarsest_step(self.accuracy.relative)
+        if step > limit:
+            raise ValueError(
+                f"lines.transfer.frequency_step = {step:g}: too coarse for accuracy.relative = "
+                f"{self.accuracy.relative:g}, which allows up to {limit:.2g}"
+            )
+        most = highest_line(fitted_step(step)) - 1
+        if self.atom_size.lyman_lines > most:
+            raise ValueError(
+                f"lines.transfer.frequency_step = {step:g}: tells {most} Lyman lines apart, and "
+                f"lines.lyman_lines = {self.atom_size.lyman_lines}"
+            )
+        lowest = COLDEST_FIELD_K / self.cosmology.cmb_temperature_k - 1.0
+        if self.grid.redshift_end < lowest:
+            raise ValueError(
+                f"grid.redshift_end = {self.grid.redshift_end:g}: the field is resolved down to "
+                f"redshift {lowest:.4g} (T_r = {COLDEST_FIELD_K:g} K)"
             )
 
     def _check_overrides_act(self) -> None:
@@ -157,6 +197,11 @@ class Setup:
             if process == "escape" and self.lines.hydrogen == "closed":
                 raise ValueError(
                     f'{one.where}: {one.text} changes nothing: lines.hydrogen = "closed"'
+                )
+            if process == "escape" and self.lines.hydrogen == "transfer":
+                raise ValueError(
+                    f'{one.where}: {one.text}: with lines.hydrogen = "transfer" the escape follows '
+                    "from the field and cannot be overridden"
                 )
             off = self.hydrogen.two_photon_rate_per_s == 0.0 and one.value_per_s is None
             if process == "two_photon" and off:
@@ -170,6 +215,14 @@ class Setup:
         count, n_max = self.lines.lyman_lines, self.hydrogen.n_max
         lines = n_max - 1 if isinstance(count, str) else count
         return AtomSize(n_max, self.hydrogen.highest_resolved, lines)
+
+    @property
+    def frequency_step(self) -> float:
+        """Width of the cells of a resolved field in ln nu (dimensionless), asked or chosen."""
+        chosen = self.lines.transfer
+        if chosen is not None and chosen.frequency_step is not None:
+            return chosen.frequency_step
+        return chosen_step(self.accuracy.relative)
 
     @property
     def two_photon_rate_per_s(self) -> float:

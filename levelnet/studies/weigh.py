@@ -19,8 +19,8 @@ from ..atomic.levels import level_name
 from ..background.last_scattering import ionized_redshift
 from ..background.parameters import COSMOLOGICAL, helium_mass_fraction
 from ..errors import InputError
+from ..escape.family import treatment as member
 from ..escape.treatment import LineTreatment
-from ..escape.treatment import treatment as member
 from ..history.cost import check_memory
 from ..history.integrate import Progress
 from ..history.notes import notes_of

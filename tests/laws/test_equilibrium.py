@@ -11,7 +11,7 @@ from hypothesis import strategies as st
 
 from levelnet.atomic.detailed_balance import log_saha_factor
 from levelnet.background.conditions import Conditions
-from levelnet.escape.treatment import TREATMENTS
+from levelnet.escape.family import TREATMENTS
 from levelnet.escape.two_photon import with_two_photon
 from levelnet.history.atom import lyman_lines
 from levelnet.network import assembly

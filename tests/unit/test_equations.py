@@ -10,7 +10,7 @@ import pytest
 from scipy import constants as si
 
 from levelnet.background.matter import saha_log_odds
-from levelnet.escape.treatment import TREATMENTS
+from levelnet.escape.family import TREATMENTS
 from levelnet.history.atom import build_ladder, lyman_lines
 from levelnet.history.equations import SlowEquations, ionized_and_neutral
 from levelnet.history.start import equilibrium_state

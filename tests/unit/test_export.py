@@ -24,7 +24,7 @@ from levelnet.background.matter import compton_rate_per_s
 from levelnet.distilled.export import exported_texts
 from levelnet.distilled.table import EffectiveTable
 from levelnet.errors import InputError
-from levelnet.escape.treatment import treatment
+from levelnet.escape.family import treatment
 from levelnet.history.atom import open_lyman_lines, resonance_lines
 from levelnet.history.equations import SlowEquations
 from tests.small_runs import COSMOLOGY

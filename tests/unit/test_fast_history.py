@@ -16,8 +16,8 @@ from levelnet.distilled.prepared import make_atom, rate_names
 from levelnet.distilled.table import EffectiveTable
 from levelnet.distilled.universe import make_universe
 from levelnet.errors import InputError, RangeError
+from levelnet.escape.family import treatment
 from levelnet.escape.lines import Lines
-from levelnet.escape.treatment import treatment
 from levelnet.history.atom import resonance_lines
 from levelnet.history.equations import SlowEquations
 from levelnet.history.start import equilibrium_state

@@ -11,7 +11,7 @@ from scipy.sparse.linalg import spsolve
 
 from levelnet.background.conditions import Conditions
 from levelnet.errors import Outcome, SolveError
-from levelnet.escape.treatment import TREATMENTS
+from levelnet.escape.family import TREATMENTS
 from levelnet.escape.two_photon import with_two_photon
 from levelnet.history.atom import lyman_lines
 from levelnet.network.assembly import rate_matrix, recombination_coefficients

@@ -18,7 +18,7 @@ from levelnet.distilled.build import distill
 from levelnet.distilled.effective import effective_rates
 from levelnet.distilled.history import history_from_table
 from levelnet.errors import InputError
-from levelnet.escape.treatment import TREATMENTS
+from levelnet.escape.family import TREATMENTS
 from levelnet.history.atom import build_ladder, resonance_lines
 from levelnet.history.cost import estimate
 from levelnet.history.integrate import setup_handover, slow_equations

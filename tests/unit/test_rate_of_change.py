@@ -11,8 +11,8 @@ from scipy import constants as si
 
 from levelnet.distilled.local import ARGUMENTS, LocalRates, rate_of_change
 from levelnet.errors import InputError, RangeError
+from levelnet.escape.family import treatment
 from levelnet.escape.lines import Lines
-from levelnet.escape.treatment import treatment
 from levelnet.history.atom import resonance_lines
 from levelnet.history.equations import SlowEquations
 from tests.fast_tables import small_table

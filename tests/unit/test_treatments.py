@@ -11,14 +11,8 @@ from scipy import constants as si
 
 from levelnet.background.conditions import Conditions
 from levelnet.errors import InputError
-from levelnet.escape.treatment import (
-    TREATMENTS,
-    LineTreatment,
-    Open,
-    ResonanceLines,
-    Sobolev,
-    treatment,
-)
+from levelnet.escape.family import TREATMENTS, treatment
+from levelnet.escape.treatment import LineTreatment, Open, ResonanceLines, Sobolev
 from levelnet.history.atom import lyman_lines
 from levelnet.network.coupling import GroundCoupling
 from levelnet.network.ladder import hydrogen_ladder
