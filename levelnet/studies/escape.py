@@ -12,7 +12,6 @@ from functools import partial
 import numpy as np
 
 from ..arrays import FloatArray
-from ..escape.treatment import treatment
 from ..history.cost import check_memory
 from ..history.integrate import Progress, output_redshifts
 from ..history.setup import Setup
@@ -112,12 +111,16 @@ def run_plan(
     variants = [*plan.variants, *([] if plan.coarser is None else [plan.coarser])]
     jobs = [(one.name, variant_setup(setup, one)) for one in variants]
     check_memory(jobs[plan.reference][1], workers)
-    keeps = tuple(
-        sorted({level for _, one in jobs for level in treatment(one.lines.hydrogen).keeps})
-    )
+    keeps = tuple(sorted({level for _, one in jobs for level in one.lines.field_levels}))
     costs = [_FIELD_COST if one.lines.hydrogen == "transfer" else 1.0 for _, one in jobs]
     with _shared(pieces, executor) as kept:
-        task = partial(compute_variant, keeps=keeps, pieces=kept, optical_depth_to=optical_depth_to)
+        task = partial(
+            compute_variant,
+            keeps=keeps,
+            pieces=kept,
+            optical_depth_to=optical_depth_to,
+            field_of=plan.variants[plan.reference].name,
+        )
         # The first fills the pieces: processes that start together would all reduce the network.
         first = int(np.argmin(costs))
         done = {first: task(jobs[first])}

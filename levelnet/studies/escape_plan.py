@@ -111,7 +111,19 @@ def escape_plan(setup: Setup, order: Iterable[str] | None = None) -> Plan:
     removed = tuple(
         having(set(switches) - _with_needing(one), f"transfer without {one}") for one in switches
     )
-    return Plan(tuple(found), treatments, base, reference, switches, alone, removed, cumulative)
+    whole = found[reference]
+    coarser = Variant(f"{whole.name}, cells twice as wide", _coarser(variant_setup(setup, whole)))
+    return Plan(
+        tuple(found),
+        treatments,
+        base,
+        reference,
+        switches,
+        alone,
+        removed,
+        cumulative,
+        coarser,
+    )
 
 
 def transfer_lines(lines: Lines, chosen: frozenset[str]) -> Lines:
@@ -140,6 +152,12 @@ def variant_setup(setup: Setup, one: Variant) -> Setup:
         return dataclasses.replace(setup, lines=one.lines)
     except InputError as error:
         raise InputError(f"{one.name}: {error}") from None
+
+
+def _coarser(setup: Setup) -> Lines:
+    assert setup.lines.transfer is not None
+    wider = dataclasses.replace(setup.lines.transfer, frequency_step=2.0 * setup.frequency_step)
+    return dataclasses.replace(setup.lines, transfer=wider)
 
 
 def _without_field(lines: Lines) -> list[tuple[str, Lines]]:

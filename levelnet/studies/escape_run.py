@@ -7,17 +7,15 @@ from typing import NamedTuple
 import numpy as np
 
 from ..arrays import FloatArray
-from ..background.last_scattering import ionized_redshift
 from ..errors import Outcome, SolveError
 from ..history.equations import ionized_and_neutral
-from ..history.integrate import integrate_history
 from ..history.outcome import outcome_of, relaxation_hubble
 from ..history.outputs import channels, state_at
 from ..history.result import Channels, RadiationField
 from ..history.setup import Setup
 from ..numerics.threads import one_blas_thread
 from ..pieces import Pieces
-from .rung import observed
+from .rung import integrate_observed, observed
 
 
 class VariantResult(NamedTuple):
@@ -34,7 +32,7 @@ class VariantResult(NamedTuple):
     channels : Channels
         How atoms reached the ground state.
     field : RadiationField or None
-        The field, if the treatment resolves one.
+        The field, if it was asked for and the treatment resolves one.
     outcome : Outcome
         How the run ended.
     """
@@ -54,6 +52,7 @@ def compute_variant(
     keeps: tuple[tuple[int, int], ...],
     pieces: Pieces | None,
     optical_depth_to: tuple[float, ...] = (),
+    field_of: str = "",
 ) -> VariantResult:
     """Compute one variant: the task of a worker.
 
@@ -67,6 +66,8 @@ def compute_variant(
         Where reduced networks are kept.
     optical_depth_to : tuple of float, dimensionless
         Redshifts Z for optical_depth(Z).
+    field_of : str
+        The variant whose field is given back.
 
     Raises
     ------
@@ -75,10 +76,7 @@ def compute_variant(
     """
     name, setup = named
     with one_blas_thread():
-        start = ionized_redshift(setup.cosmology)  # observables start there
-        integrated = integrate_history(
-            setup, lambda *_: None, pieces, keeps=keeps, start_above=start
-        )
+        integrated = integrate_observed(setup, pieces, keeps)
         outcome = integrated.trajectory.outcome
         if not outcome.ok:
             raise SolveError(f"{name}: {outcome.value}", outcome=outcome)
@@ -95,6 +93,6 @@ def compute_variant(
             seen.units,
             seen.value,
             channels(integrated, redshift, flows),
-            None,
+            integrated.field.field if integrated.field and name == field_of else None,
             outcome_of(setup, integrated, map(relaxation_hubble, here)),
         )
