@@ -7,7 +7,8 @@ from typing import Any
 
 from levelnet.background.conditions import Conditions
 from levelnet.background.cosmology import Cosmology
-from levelnet.escape.treatment import LineTreatment, treatment
+from levelnet.escape.family import treatment
+from levelnet.escape.treatment import LineTreatment
 from levelnet.history.atom import build_ladder, lyman_lines
 from levelnet.history.equations import SlowEquations
 from levelnet.history.result import History

@@ -22,6 +22,7 @@ from ..numerics.stepping import Trajectory, integrate
 from ..pieces import Pieces, code_digest, content_key
 from .atom import build_ladder, open_lyman_lines, resonance_lines
 from .cost import table_tolerance
+from .course import Course
 from .equations import SlowEquations
 from .field import FieldRun, resolve_field
 from .setup import Setup
@@ -41,32 +42,23 @@ _SCOUT_N = 6
 
 
 @dataclass(frozen=True, slots=True, eq=False)
-class Integrated:
+class Integrated(Course):
     """The slow variables of one run, before populations are worked out.
 
     Attributes
     ----------
-    equations : SlowEquations
-        The equations solved.
     ladder : Ladder
         The atom.
-    handover : Handover
-        Where the integration started.
     redshift : ndarray, shape (n_redshift,)
         Output redshifts, descending.
-    trajectory : Trajectory
-        Accepted steps from the hand-over down; time is ln a.
     measured : Reduced
         The reduced network with the measured constants; `equations` holds it with the setup's.
     field : FieldRun or None
         The march behind it, where the treatment resolves the field.
     """
 
-    equations: SlowEquations
     ladder: Ladder
-    handover: Handover
     redshift: FloatArray
-    trajectory: Trajectory
     measured: Reduced
     field: FieldRun | None = None
 
@@ -109,9 +101,9 @@ def integrate_history(
     equations = slow_equations(setup, with_scales(reduced, factor), chosen)
     if resolved:
         run = march_field(setup, equations, handover, redshift, tell)
-        return Integrated(run.equations, ladder, handover, redshift, run.trajectory, reduced, run)
+        return Integrated(run.equations, handover, run.trajectory, ladder, redshift, reduced, run)
     trajectory = integrate_slow(setup, equations, handover, redshift, tell)
-    return Integrated(equations, ladder, handover, redshift, trajectory, reduced)
+    return Integrated(equations, handover, trajectory, ladder, redshift, reduced)
 
 
 def setup_handover(setup: Setup, chosen: LineTreatment | None = None) -> Handover:

@@ -27,6 +27,7 @@ from ..network.assembly import (
 from ..network.populations import LevelPopulations, populations
 from ..network.tabulation import TabulatedReduction
 from ..numerics.stepping import Trajectory
+from .course import electron_fraction_at, state_at
 from .equations import Local, SlowEquations, ionized_and_neutral
 from .integrate import Integrated, Progress
 from .observables import milestones, optical_depth
@@ -40,7 +41,6 @@ from .result import (
     SpeciesPopulations,
 )
 from .setup import Setup
-from .start import equilibrium_state
 
 _SMALLEST_LOG = math.log(1e-300)
 
@@ -103,16 +103,6 @@ def assemble_history(
     )
 
 
-def state_at(integrated: Integrated, log_scale: float) -> FloatArray:
-    """Slow variables at one time: equilibrium above the hand-over, the integrated ones below."""
-    if log_scale <= -math.log1p(integrated.handover.redshift):
-        return equilibrium_state(integrated.equations, log_scale)[0]
-    trajectory = integrated.trajectory
-    nearest = int(np.argmin(np.abs(trajectory.time - log_scale)))
-    state: FloatArray = trajectory.state[nearest]
-    return state
-
-
 def _outputs(integrated: Integrated, redshift: FloatArray, tell: Progress) -> list[_Output]:
     work = Workspace.of(integrated.ladder)
     found = []
@@ -159,18 +149,6 @@ def _seen(
         marks = milestones(cosmology, grid, electrons, thomson)
     visibility = opacity_per_mpc(electrons_cm3, 1.0 + redshift, thomson) * np.exp(-depth)
     return depth, visibility, marks
-
-
-def electron_fraction_at(integrated: Integrated, log_scale: FloatArray) -> FloatArray:
-    """n_e/n_H (dimensionless) at any ln a of the history."""
-    log_odds = np.empty(len(log_scale))
-    below = log_scale > -math.log1p(integrated.handover.redshift)
-    trajectory = integrated.trajectory
-    if below.any():
-        log_odds[below] = CubicSpline(trajectory.time, trajectory.state[:, 0])(log_scale[below])
-    for k in np.flatnonzero(~below):
-        log_odds[k] = equilibrium_state(integrated.equations, log_scale[k])[0][0]
-    return np.array([ionized_and_neutral(u)[0] for u in log_odds.tolist()])
 
 
 def _species(integrated: Integrated, outputs: list[_Output]) -> SpeciesPopulations:

@@ -22,10 +22,11 @@ from ..arrays import FloatArray
 from ..background.last_scattering import Observed, ionized_redshift, observe
 from ..background.quadrature import quadrature
 from ..errors import Outcome, SolveError
+from ..history.course import electron_fraction_at, state_at
 from ..history.equations import ionized_and_neutral
 from ..history.integrate import Integrated, integrate_history, output_redshifts
 from ..history.outcome import outcome_of, relaxation_hubble
-from ..history.outputs import electron_fraction_at, solve_levels, state_at
+from ..history.outputs import solve_levels
 from ..history.setup import Setup
 from ..network.assembly import Workspace
 from ..numerics.threads import one_blas_thread
