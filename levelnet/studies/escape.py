@@ -14,11 +14,12 @@ import numpy as np
 from ..arrays import FloatArray
 from ..history.cost import check_memory
 from ..history.integrate import Progress, output_redshifts
+from ..history.result import Channels
 from ..history.setup import Setup
 from ..pieces import FolderPieces, MemoryPieces, Pieces
 from .escape_plan import Plan, escape_plan, variant_setup
 from .escape_records import EscapeStudy, NumericalError, Switches, Variants
-from .escape_run import VariantResult, compute_variant
+from .escape_run import Job, VariantResult, compute_variant
 from .jobs import run_jobs
 from .rung import study_setup
 
@@ -108,28 +109,42 @@ def run_plan(
     progress: Progress | None = None,
 ) -> EscapeStudy:
     """Run all variants of a plan on the grid of `setup`; see :func:`escape_study`."""
-    variants = [*plan.variants, *([] if plan.coarser is None else [plan.coarser])]
-    jobs = [(one.name, variant_setup(setup, one)) for one in variants]
-    check_memory(jobs[plan.reference][1], workers)
-    keeps = tuple(sorted({level for _, one in jobs for level in one.lines.field_levels}))
-    costs = [_FIELD_COST if one.lines.hydrogen == "transfer" else 1.0 for _, one in jobs]
+    jobs = _jobs(setup, plan)
+    reference = jobs[plan.reference]
+    check_memory(reference.setup, workers)
+    costs = [_FIELD_COST if one.setup.lines.transfer else 1.0 for one in jobs]
     with _shared(pieces, executor) as kept:
-        task = partial(
-            compute_variant,
-            keeps=keeps,
-            pieces=kept,
-            optical_depth_to=optical_depth_to,
-            field_of=plan.variants[plan.reference].name,
-        )
+        task = partial(compute_variant, pieces=kept, optical_depth_to=optical_depth_to)
         # The first fills the pieces: processes that start together would all reduce the network.
-        first = int(np.argmin(costs))
+        sharing = [k for k, one in enumerate(jobs) if one.keeps == reference.keeps]
+        first = min(sharing, key=lambda k: costs[k])
         done = {first: task(jobs[first])}
         left = [k for k in range(len(jobs)) if k not in done]
         found = run_jobs(
             [jobs[k] for k in left], [costs[k] for k in left], task, executor, progress, "variants"
         )
     done |= zip(left, found, strict=True)
-    return _assemble(jobs[plan.reference][1], plan, [done[k] for k in range(len(jobs))])
+    return _assemble(reference.setup, plan, [done[k] for k in range(len(jobs))])
+
+
+def _jobs(setup: Setup, plan: Plan) -> list[Job]:
+    """Every variant with the same levels kept, so that all share one interior of the atom.
+
+    Where the lines are closed the lowest levels have no exit once the field is cold. Their
+    populations then mean nothing, and further kept levels would stop the integration there.
+    """
+    variants = [*plan.variants, *([] if plan.coarser is None else [plan.coarser])]
+    setups = [variant_setup(setup, one) for one in variants]
+    keeps = tuple(sorted({level for one in setups for level in one.lines.field_levels}))
+    return [
+        Job(
+            variant.name,
+            one,
+            () if one.lines.hydrogen == "closed" else keeps,
+            variant is plan.variants[plan.reference],
+        )
+        for variant, one in zip(variants, setups, strict=True)
+    ]
 
 
 @contextmanager
@@ -172,6 +187,7 @@ def _assemble(setup: Setup, plan: Plan, results: list[VariantResult]) -> EscapeS
 
 
 def _variants(plan: Plan, results: list[VariantResult]) -> Variants:
+    channels = results[plan.reference].channels.names
     import tomli_w
 
     texts = [dataclasses.asdict(one.lines) for one in plan.variants]
@@ -182,8 +198,14 @@ def _variants(plan: Plan, results: list[VariantResult]) -> Variants:
         np.array([one.electron_fraction for one in results]),
         np.array([one.matter_temperature_k for one in results]),
         np.array([one.observable for one in results]),
-        np.array([one.channels.cumulative_share[-1] for one in results]),
+        np.array([_shares(one.channels, channels) for one in results]),
     )
+
+
+def _shares(channels: Channels, names: tuple[str, ...]) -> list[float]:
+    """Shares down to the last redshift by the names of the reference; 0 where there is none."""
+    known = dict(zip(channels.names, channels.cumulative_share[-1].tolist(), strict=True))
+    return [known.get(name, 0.0) for name in names]
 
 
 def _without_none(values: dict[str, object]) -> dict[str, object]:

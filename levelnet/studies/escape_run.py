@@ -8,14 +8,36 @@ import numpy as np
 
 from ..arrays import FloatArray
 from ..errors import Outcome, SolveError
+from ..history.course import state_at
 from ..history.equations import ionized_and_neutral
 from ..history.outcome import outcome_of, relaxation_hubble
-from ..history.outputs import channels, state_at
+from ..history.outputs import channels
 from ..history.result import Channels, RadiationField
 from ..history.setup import Setup
 from ..numerics.threads import one_blas_thread
 from ..pieces import Pieces
 from .rung import integrate_observed, observed
+
+
+class Job(NamedTuple):
+    """One variant that is to be run.
+
+    Attributes
+    ----------
+    name : str
+        What the variant is called.
+    setup : Setup
+        Its setup.
+    keeps : tuple of (n, l)
+        Levels kept from elimination beside those of its lines.
+    with_field : bool
+        Whether its field is given back.
+    """
+
+    name: str
+    setup: Setup
+    keeps: tuple[tuple[int, int], ...]
+    with_field: bool
 
 
 class VariantResult(NamedTuple):
@@ -48,38 +70,30 @@ class VariantResult(NamedTuple):
 
 
 def compute_variant(
-    named: tuple[str, Setup],
-    keeps: tuple[tuple[int, int], ...],
-    pieces: Pieces | None,
-    optical_depth_to: tuple[float, ...] = (),
-    field_of: str = "",
+    job: Job, pieces: Pieces | None, optical_depth_to: tuple[float, ...] = ()
 ) -> VariantResult:
     """Compute one variant: the task of a worker.
 
     Parameters
     ----------
-    named : tuple of str and Setup
-        What the variant is called, and its setup.
-    keeps : tuple of (n, l)
-        Levels kept from elimination, the same for all variants, so that they share the interior.
+    job : Job
+        The variant.
     pieces : Pieces or None
         Where reduced networks are kept.
     optical_depth_to : tuple of float, dimensionless
         Redshifts Z for optical_depth(Z).
-    field_of : str
-        The variant whose field is given back.
 
     Raises
     ------
     SolveError
         If the run ended before its last output.
     """
-    name, setup = named
+    setup = job.setup
     with one_blas_thread():
-        integrated = integrate_observed(setup, pieces, keeps)
+        integrated = integrate_observed(setup, pieces, job.keeps)
         outcome = integrated.trajectory.outcome
         if not outcome.ok:
-            raise SolveError(f"{name}: {outcome.value}", outcome=outcome)
+            raise SolveError(f"{job.name}: {outcome.value}", outcome=outcome)
         redshift = integrated.redshift
         times = (-np.log1p(redshift)).tolist()
         states = np.array([state_at(integrated, s) for s in times])
@@ -93,6 +107,6 @@ def compute_variant(
             seen.units,
             seen.value,
             channels(integrated, redshift, flows),
-            integrated.field.field if integrated.field and name == field_of else None,
+            integrated.field.field if integrated.field and job.with_field else None,
             outcome_of(setup, integrated, map(relaxation_hubble, here)),
         )
