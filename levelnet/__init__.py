@@ -26,7 +26,8 @@ if TYPE_CHECKING:
     from .distilled.build import distill
     from .distilled.effective import EffectiveRates, effective_rates
     from .distilled.ensemble import Ensemble, ensemble
-    from .distilled.history import FastHistory, history_from_table
+    from .distilled.fast import FastHistory
+    from .distilled.history import history_from_table
     from .distilled.local import LocalRates, rate_of_change
     from .distilled.table import EffectiveTable
     from .errors import AccuracyWarning, InputError, LevelnetError, Outcome, SolveError
@@ -52,7 +53,7 @@ _HOMES = {
     "EffectiveTable": "distilled.table",
     "Ensemble": "distilled.ensemble",
     "EscapeStudy": "studies.escape_records",
-    "FastHistory": "distilled.history",
+    "FastHistory": "distilled.fast",
     "History": "history.result",
     "InputError": "errors",
     "LevelStudy": "studies.level_records",

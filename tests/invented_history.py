@@ -10,11 +10,11 @@ from levelnet.atomic.levels import hydrogenic_levels
 from levelnet.atomic.species import Hydrogen
 from levelnet.background.cosmology import Cosmology
 from levelnet.errors import Outcome
+from levelnet.history.line_figures import LineFigures
 from levelnet.history.result import (
     Channels,
     Diagnostics,
     History,
-    LineFigures,
     Milestones,
     RadiationField,
     SpeciesPopulations,
@@ -80,7 +80,9 @@ def invented_history(
         species=(populations,),
         channels=Channels(ways, by(count), shares(count), shares(count)),
         lines=LineFigures(
-            lines, *(by(len(lines)) * scale for scale in (1e8, 1e-8, 1e-3, 1.0, 1e-3))
+            lines,
+            *(by(len(lines)) * scale for scale in (1e8, 1e-8, 1.0, 1.0, 1e-3, 1.0, 1e-3, 1e-4)),
+            *(by(len(lines)) * scale for scale in (1e-3, 30.0, 1e-2, 1e-2, 5.0, 9.0, 1e-2)),
         ),
         milestones=Milestones(1089.7, 1087.2, math.nan, 1274.3, math.nan, 5.1e12),
         diagnostics=Diagnostics(

@@ -15,7 +15,7 @@ from .paths import check_target
 from .table_output import distilled_summary, distilled_values
 
 if TYPE_CHECKING:
-    from ..distilled.history import FastHistory
+    from ..distilled.fast import FastHistory
     from ..distilled.table import EffectiveTable
     from ..history.setup import Setup
 

@@ -11,6 +11,7 @@ from typing import TYPE_CHECKING, Any
 
 from ..constants import SECONDS_PER_YEAR
 from ..quantities import OBSERVABLES
+from .line_output import line_rows, line_values
 
 if TYPE_CHECKING:
     from ..arrays import FloatArray
@@ -145,6 +146,7 @@ def history_values(history: History) -> dict[str, Any]:
                 "radiation_temperature_k",
             )
         },
+        "line_figures": line_values(history, rows),
         "cumulative_channel_shares": dict(
             zip(history.channels.names, history.channels.cumulative_share[-1], strict=True)
         ),
@@ -188,6 +190,9 @@ def summary_text(history: History) -> str:
         "",
     ]
     body = [*_milestone_lines(history), "", *_sample_lines(history), "", *_share_lines(history)]
+    if history.lines.names:
+        table = line_rows(history, sample_rows(history))
+        body += ["", *aligned(table, right=True)]
     how = [*_diagnostic_lines(history), *_frequency_lines(history.diagnostics)]
     return "\n".join([*head, *body, "", *how, *_field_lines(history.field), *_note_lines(history)])
 

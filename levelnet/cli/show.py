@@ -85,7 +85,7 @@ def run(options: argparse.Namespace, console: Console) -> int:
 
 def _screens() -> dict[type, Callable[..., None]]:
     """What shows a record, by its type."""
-    from ..distilled.history import FastHistory
+    from ..distilled.fast import FastHistory
     from ..distilled.table import EffectiveTable
     from ..history.result import History
     from ..studies.escape_records import EscapeStudy

@@ -16,7 +16,7 @@ from .output import print_result
 from .table_output import distilled_summary, distilled_values, table_summary, table_values
 
 if TYPE_CHECKING:
-    from ..distilled.history import FastHistory
+    from ..distilled.fast import FastHistory
     from ..distilled.table import EffectiveTable
     from ..studies.escape_records import EscapeStudy
     from ..studies.level_records import LevelStudy

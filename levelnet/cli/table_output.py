@@ -9,7 +9,7 @@ from ..quantities import OBSERVABLES
 from .output import aligned, atom_size, row
 
 if TYPE_CHECKING:
-    from ..distilled.history import FastHistory
+    from ..distilled.fast import FastHistory
     from ..distilled.table import EffectiveTable
     from ..history.setup import Setup
 

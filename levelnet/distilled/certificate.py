@@ -17,6 +17,7 @@ import numpy as np
 from ..arrays import FloatArray, frozen_array
 from ..background.cosmology import Cosmology
 from ..errors import LevelnetError
+from ..escape.lines import Lines
 from ..history.equations import ionized_and_neutral
 from ..history.integrate import integrate_slow, setup_handover, slow_equations
 from ..history.setup import Setup
@@ -264,10 +265,15 @@ def _history_error(
     if inside.sum() < 2:
         return error
     accuracy = dataclasses.replace(table.setup.accuracy, relative=_STEPPING)
-    setup = dataclasses.replace(table.setup, cosmology=cosmology, accuracy=accuracy)
+    # A field changes none of the rates; Sobolev's treatment weighs them as well.
+    chosen = table.setup.lines
+    lines = chosen if chosen.transfer is None else Lines(lyman_lines=chosen.lyman_lines)
+    setup = dataclasses.replace(table.setup, cosmology=cosmology, accuracy=accuracy, lines=lines)
     try:
         full = _full_history(setup, with_scales(reference, table.scales), redshift[inside])
-        fast = history_from_table(table, cosmology, redshifts=redshift[inside], relative=_STEPPING)
+        fast = history_from_table(
+            table, cosmology, redshifts=redshift[inside], lines=lines, relative=_STEPPING
+        )
     except LevelnetError:  # no channel to the ground state, or a start beyond the table
         return error
     error[inside] = fast.free_electron_fraction / full - 1.0

@@ -13,7 +13,8 @@ import numpy as np
 from ..arrays import FloatArray
 from ..background.cosmology import Cosmology
 from ..errors import InputError, LevelnetError
-from .history import FastHistory, history_from_table
+from .fast import FastHistory
+from .history import history_from_table
 from .table import EffectiveTable
 
 # Cosmologies handed to a worker at once: a few milliseconds of work.

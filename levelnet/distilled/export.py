@@ -21,6 +21,7 @@ from ..history.atom import open_lyman_lines, resonance_lines
 from .about import about_lines, level_names, pair_names
 from .effective import NEVER
 from .grid_text import grid_text
+from .kept import check_without_field
 from .stimulation import stimulation_c, stimulation_fortran, stimulation_polynomials
 from .table import COLLISIONS_K, EffectiveTable
 
@@ -66,6 +67,7 @@ def exported_texts(table: EffectiveTable, language: str, name: str) -> dict[str,
         raise InputError(f'export = "{language}": allowed are {", ".join(LANGUAGES)}')
     if language == "csv":
         return {f"{name}.csv": grid_text(table)}
+    check_without_field(table.setup.lines)
     if not re.fullmatch(r"[A-Za-z][A-Za-z0-9_]*", name) or len(name) > _LONGEST_PREFIX:
         raise InputError(
             f'name = "{name}": names in the code start with it, so at most {_LONGEST_PREFIX} '

@@ -4,13 +4,12 @@ from __future__ import annotations
 
 import math
 from collections.abc import Mapping
-from dataclasses import dataclass
 from typing import NamedTuple
 
 import numpy as np
 from numpy.typing import ArrayLike
 
-from ..arrays import FloatArray, frozen_array
+from ..arrays import FloatArray
 from ..atomic.physics import Physics, scales
 from ..background.cosmology import Cosmology
 from ..background.parameters import COSMOLOGICAL
@@ -25,10 +24,12 @@ from ..kernels.effective import (
     Atom,
     effective_history,
 )
+from .fast import FastHistory, Sensitivities, fractions
 from .observables import Observables, observe_run, table_quadrature
 from .prepared import choose_physics, make_atom, rate_names, scale_factors
 from .table import EffectiveTable
 from .universe import CONSTANTS, make_drive, make_universe
+from .with_field import field_setup, history_with_field
 
 # Local error allowed in a step over the error asked of x_e; with it x_e was measured to a quarter.
 _LOCAL = 2.0
@@ -39,94 +40,6 @@ _START = 0.1
 _FIRST_STEP, _MAX_STEPS = 1e-3, 20_000
 _TIGHTEST, _LOOSEST = 1e-11, 1e-3
 _COUNT = 2000
-
-
-@dataclass(frozen=True, slots=True, eq=False)
-class Sensitivities:
-    """Derivatives of a history by its parameters; the last axis of each array is the parameter.
-
-    Attributes
-    ----------
-    parameters : tuple of str
-        The six of the cosmology (per unit of each), "fine_structure_change" and
-        "electron_mass_change" (per unit relative change), then "ln recombination_2s", ...: per unit
-        of the ln of a factor on the rate of that name, see :func:`rate_names`. Of the cosmology,
-        what is not varied is held; dark energy closes the budget; a tabulated expansion does not
-        move.
-    free_electron_fraction : ndarray, shape (n_redshift, n_parameters)
-        Of x_e at fixed redshift.
-    matter_temperature_k : ndarray, shape (n_redshift, n_parameters), K per unit
-        Of T_m.
-    last_scattering_redshift, sound_horizon_mpc, damping_per_mpc : ndarray, shape (n_parameters,)
-        Of z_*, r_s and k_D.
-    """
-
-    parameters: tuple[str, ...]
-    free_electron_fraction: FloatArray
-    matter_temperature_k: FloatArray
-    last_scattering_redshift: FloatArray
-    sound_horizon_mpc: FloatArray
-    damping_per_mpc: FloatArray
-
-    def __post_init__(self) -> None:
-        """Check shapes and make every array read-only."""
-        n = len(self.parameters)
-        for name in ("free_electron_fraction", "matter_temperature_k"):
-            frozen_array(self, name, (len(self.free_electron_fraction), n))
-        for name in ("last_scattering_redshift", "sound_horizon_mpc", "damping_per_mpc"):
-            frozen_array(self, name, (n,))
-
-
-@dataclass(frozen=True, slots=True, eq=False)
-class FastHistory:
-    """A history from a table; arrays of shape (n_redshift,) over descending redshift.
-
-    Attributes
-    ----------
-    outcome : Outcome
-        How it ended.
-    redshift : ndarray, dimensionless
-        As asked, descending.
-    free_electron_fraction : ndarray, dimensionless
-        n_e / n_H.
-    ionized_hydrogen_fraction, neutral_hydrogen_fraction : ndarray, dimensionless
-        n_HII and n_HI over n_H.
-    matter_temperature_k, radiation_temperature_k : ndarray, K
-        T_m and T_r.
-    start_redshift : float, dimensionless
-        Where Saha equilibrium was left.
-    n_steps, n_rejected : int
-        Accepted and rejected steps.
-    observables : Observables or None
-        z_*, r_s and k_D, where derivatives or they were asked for.
-    sensitivities : Sensitivities or None
-        Derivatives, where asked for.
-    """
-
-    outcome: Outcome
-    redshift: FloatArray
-    free_electron_fraction: FloatArray
-    ionized_hydrogen_fraction: FloatArray
-    neutral_hydrogen_fraction: FloatArray
-    matter_temperature_k: FloatArray
-    radiation_temperature_k: FloatArray
-    start_redshift: float
-    n_steps: int
-    n_rejected: int
-    observables: Observables | None = None
-    sensitivities: Sensitivities | None = None
-
-    def __post_init__(self) -> None:
-        """Check shapes and make every array read-only."""
-        for name in (
-            "redshift",
-            "free_electron_fraction",
-            "ionized_hydrogen_fraction",
-            "neutral_hydrogen_fraction",
-            "matter_temperature_k",
-            "radiation_temperature_k",
-        ):
-            frozen_array(self, name, (len(self.redshift),))
 
 
 class Run(NamedTuple):
@@ -177,7 +90,9 @@ def history_from_table(  # noqa: PLR0913 (each is a choice of the caller)
         Output redshifts in any order, one or more, with T_r inside the table;
         None: 2000, evenly spaced in ln(1 + z), over the grid of the table's setup.
     lines : Lines, optional
-        Line treatment; None: the table's. Every open Lyman line must start from a kept level.
+        Line treatment; None: the table's. Every open Lyman line must start from a kept level, and
+        so must all that a resolved field ("transfer") talks to; it takes seconds, and knows no
+        derivatives.
     two_photon_rate_per_s : float, s^-1, optional
         2s-1s decay rate before any change of constants; None: the table's.
     relative : float, 1e-11 to 1e-3 (dimensionless)
@@ -220,9 +135,20 @@ def history_from_table(  # noqa: PLR0913 (each is a choice of the caller)
     if not _TIGHTEST <= relative <= _LOOSEST:
         raise InputError(f"relative = {relative:g}: allowed are {_TIGHTEST:g} to {_LOOSEST:g}")
     physics = choose_physics(table, fine_structure_change, electron_mass_change)
+    redshift = _redshifts(table, redshifts)
+    chosen = table.setup.lines if lines is None else lines
+    if chosen.transfer is not None:
+        if sensitivities or rate_scales:
+            raise InputError(
+                'lines.hydrogen = "transfer": neither sensitivities nor rate_scales are known with '
+                "a resolved field"
+            )
+        setup = field_setup(
+            table, cosmology, chosen, two_photon_rate_per_s, relative, physics, redshift
+        )
+        return history_with_field(table, setup, redshift, observables)
     factors = scale_factors(table, rate_scales)
     atom = make_atom(table, lines, two_photon_rate_per_s, physics, factors)
-    redshift = _redshifts(table, redshifts)
     _check_range(atom, cosmology, redshift)
     drive = _drive(table, cosmology, physics) if sensitivities else None
     outputs = -np.log1p(redshift)
@@ -331,15 +257,6 @@ def _complain(status: int, atom: Atom, report: FloatArray) -> None:
         )
     outcome = {TOO_MANY_STEPS: Outcome.STEP_LIMIT, STEP_TOO_SMALL: Outcome.STEP_TOO_SMALL}[status]
     raise SolveError(f"{outcome.value} (redshift {reached:g})")
-
-
-def fractions(log_odds: FloatArray) -> tuple[FloatArray, FloatArray]:
-    """x_HII and x_HI (dimensionless) from u, each to full relative precision."""
-    small = np.exp(-np.abs(log_odds))
-    large = 1.0 / (1.0 + small)
-    small *= large
-    hot = log_odds > 0.0
-    return np.where(hot, large, small), np.where(hot, small, large)
 
 
 def _assemble(

@@ -10,13 +10,15 @@ from ..escape.lines import Lines
 from ..escape.treatment import SobolevFeedback
 from ..history.atom import open_lyman_lines
 from ..history.setup import Setup
+from ..network.reduced import KeptLevels
 
 KeptChoice = tuple[tuple[int, int], ...]
 
 
 def needed_levels(setup: Setup) -> KeptChoice:
-    """2s, 2p and every np whose Lyman line is open: the levels that talk to the ground state."""
-    return ((2, 0), *((n, 1) for n in range(2, open_lyman_lines(setup) + 2)))
+    """2s, 2p, every np whose Lyman line is open, and what else talks to the ground state."""
+    lyman = {(n, 1) for n in range(2, open_lyman_lines(setup) + 2)}
+    return tuple(sorted({(2, 0), *lyman, *setup.lines.field_levels}))
 
 
 def choose_kept(setup: Setup, kept: Iterable[tuple[int, int]] | None) -> KeptChoice:
@@ -57,8 +59,8 @@ def choose_kept(setup: Setup, kept: Iterable[tuple[int, int]] | None) -> KeptCho
     missing = sorted(set(needed) - chosen)
     if missing:
         raise InputError(
-            f"kept: (n, l) = {missing[0]} is missing; 2s, 2p and every np with an open Lyman line "
-            "must be kept"
+            f"kept: (n, l) = {missing[0]} is missing; 2s, 2p, every np with an open Lyman line and "
+            "every level with two-photon or Raman transitions must be kept"
         )
     return tuple(sorted(chosen))
 
@@ -67,12 +69,33 @@ def _l_fits(level: tuple[int, int]) -> bool:
     return 0 <= level[1] < level[0]
 
 
+def check_kept(setup: Setup, kept: KeptLevels) -> None:
+    """Refuse a setup whose lines need levels that a table does not keep."""
+    missing = sorted(set(needed_levels(setup)) - set(kept))
+    if missing:
+        raise InputError(
+            f"lines: (n, l) = {missing[0]} talks to the ground state, and this table does not keep "
+            "it; distill the setup with these lines"
+        )
+
+
 def check_lines(lines: Lines) -> None:
     """Refuse treatments whose memory the histories made from a table do not have."""
     if lines.hydrogen == SobolevFeedback.name:
         raise InputError(
             f'lines.hydrogen = "{lines.hydrogen}": histories from a table remember nothing of the '
-            'lines above; allowed are "closed", "open" and "sobolev"; levelnet solve has it'
+            'lines above; allowed are "closed", "open", "sobolev" and, more slowly, "transfer"; '
+            "levelnet solve has it"
+        )
+
+
+def check_without_field(lines: Lines) -> None:
+    """Refuse what only a whole history can answer."""
+    check_lines(lines)
+    if lines.transfer is not None:
+        raise InputError(
+            f'lines.hydrogen = "{lines.hydrogen}": the field has a history of its own; allowed '
+            'here are "closed", "open" and "sobolev"'
         )
 
 

@@ -16,7 +16,7 @@ from ..errors import InputError
 from ..escape.lines import Lines
 from ..history.atom import resonance_lines
 from ..kernels.effective import Atom
-from .kept import check_lines
+from .kept import check_without_field
 from .stimulation import stimulation_polynomials
 from .table import EffectiveTable
 
@@ -104,7 +104,7 @@ def make_atom(
             f"two_photon_rate_per_s = {two_photon_rate_per_s:g}: allowed are 0 to 1e6 s^-1"
         )
     chosen = table.setup.lines if lines is None else lines
-    check_lines(chosen)
+    check_without_field(chosen)
     measured = _measured_atom(table, chosen)
     constants = measured.constants.copy()
     factor = scales(table.setup.physics if physics is None else physics)

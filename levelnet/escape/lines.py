@@ -114,6 +114,19 @@ class Lines:
             raise ValueError('transfer: only with hydrogen = "transfer"')
 
     @property
+    def field_resolves(self) -> tuple[str, ...]:
+        """What a resolved field gives that is missing from isolated lines."""
+        choice = self.transfer
+        if choice is None:
+            return ()
+        given = {
+            "wings": choice.excited_two_photon,
+            "scattering": choice.scattering,
+            "feedback": choice.feedback,
+        }
+        return tuple(name for name, on in given.items() if on)
+
+    @property
     def field_levels(self) -> tuple[tuple[int, int], ...]:
         """(n, l) of the levels that a resolved field talks to apart from the lines, in order."""
         if self.transfer is None:

@@ -35,6 +35,8 @@ class FieldRecord:
         ln of the distortion on the blue and the red side of each line.
     decay_per_s : float, s^-1
         Spontaneous 2s-1s rate where that decay goes through the field, else 0.
+    resolves : tuple of str
+        What the field took part in, of "wings", "scattering", "feedback".
     """
 
     radiation_temperature_k: FloatArray
@@ -42,6 +44,7 @@ class FieldRecord:
     source: FloatArray
     log_sides: FloatArray
     decay_per_s: float
+    resolves: tuple[str, ...]
 
     def __post_init__(self) -> None:
         """Check shapes and make every array read-only."""
@@ -68,7 +71,7 @@ class ResolvedField(Sobolev):
     ----------
     loss, source, log_sides : CubicSpline or None
         Of the record, over -ln T_r.
-    decay_per_s : float, s^-1
+    decay_per_s, resolves : float (s^-1), tuple of str
         As in the record.
     """
 
@@ -76,6 +79,7 @@ class ResolvedField(Sobolev):
     source: CubicSpline | None = None
     log_sides: CubicSpline | None = None
     decay_per_s: float = 0.0
+    resolves: tuple[str, ...] = ()
 
     name: ClassVar[str] = "transfer"
     assumes: ClassVar[tuple[str, ...]] = (
@@ -99,6 +103,7 @@ class ResolvedField(Sobolev):
             record.spline(record.source),
             record.spline(record.log_sides),
             record.decay_per_s,
+            record.resolves,
         )
 
     def couple(
@@ -156,4 +161,5 @@ def log_distortion(
     with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
         above = np.logaddexp(0.0, np.log(departure) + exponent)
         below = np.log1p(departure * np.exp(exponent))
-    return np.where(departure > 0.0, above, below)
+    # No departure times an exponential that overflows is still none.
+    return np.where(departure > 0.0, above, np.where(departure == 0.0, 0.0, below))

@@ -61,7 +61,9 @@ class LineTreatment(Protocol):
     """How photons of the resonance lines escape; a member of the family or a user's own object.
 
     A treatment answers from the conditions of the moment, and, if it `sees_blue_side`, from the
-    field that the lines above have sent; what is remembered of them the run keeps.
+    field that the lines above have sent; what is remembered of them the run keeps. It may have
+    `resolves`, of "wings" (true absorption and emission there, in time), "scattering" (with recoil)
+    and "feedback": limits on what it resolves raise no warnings (`levelnet.history.limits`).
 
     Attributes
     ----------
@@ -89,7 +91,8 @@ class LineTreatment(Protocol):
         """Give K and s of the net flow K x - s to the ground state at these conditions.
 
         The slopes of K by ln(n_1s/H) and ln T_r must be exact: the implicit step rests on them.
-        `validity` may hold "optical_depth" and "escape_probability" per line.
+        `validity` may hold "optical_depth" and "escape_probability" per line, and "log_blue_side"
+        and "log_red_side" where the treatment has a field of its own.
         """
         ...
 
@@ -182,8 +185,8 @@ class Sobolev(_Isolated):
         "No continuum absorbs inside the line.",
     )
     holds_for: ClassVar[tuple[str, ...]] = (
-        "Widths where the line is thick far below its frequency (thick_width_absorption << 1, and "
-        "thick_width_scattering where scattering in the wings is not coherent). Two-photon wings, "
+        "Source functions steady over the width thick to true absorption (source_change << 1) and "
+        "wings without recoil (recoil_gain << 1). Two-photon wings, "
         "recoil and diffusion in Lyman-alpha change x_e by 1 to 2 per cent (Hirata 2008, "
         "Phys. Rev. D 78, 023001; Chluba & Sunyaev 2009, "
         "Astron. Astrophys. 503, 345).",
@@ -200,6 +203,7 @@ class SobolevFeedback(Sobolev):
 
     name: ClassVar[str] = "sobolev_feedback"
     sees_blue_side: ClassVar[bool] = True
+    resolves: ClassVar[tuple[str, ...]] = ("feedback",)
     assumes: ClassVar[tuple[str, ...]] = (
         "Complete redistribution over the line profile.",
         "Conditions stay constant while a photon crosses the line.",

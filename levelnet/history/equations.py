@@ -191,13 +191,15 @@ class SlowEquations:
         if self.past is None:
             return
         here = self.local(log_scale, state)
-        blue = self.past.blue_side(log_scale, 0.0)
+        blue = self.past.blue_side(log_scale, 0.0).log_distortion
+        red = log_red_side(*self.line_state(here), here.coupling.validity["optical_depth"], blue)
+        self.past.remember(log_scale, red)
+
+    def line_state(self, here: Local) -> tuple[FloatArray, FloatArray]:
+        """Ln departure of each upper level from Boltzmann at T_r, and line energy over k T_r."""
         departure = here.solution.log_population - here.solution.log_boltzmann
         kt = const.BOLTZMANN_EV_K * here.conditions.radiation_temperature_k
-        depth = here.coupling.validity["optical_depth"]
-        upper, exponent = self.lines.upper, self.lines.energy_ev / kt
-        red = log_red_side(departure[upper], exponent, depth, blue.log_distortion)
-        self.past.remember(log_scale, red)
+        return departure[self.lines.upper], self.lines.energy_ev / kt
 
     def line_coupling(self, conditions: Conditions, blue: BlueSide | None = None) -> GroundCoupling:
         """Coupling of the lines alone, without the two-photon channel."""

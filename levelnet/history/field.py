@@ -257,7 +257,7 @@ def resolve_field(
         equations,
         reference,
         start,
-        end + 4.0 * asked,
+        end,
         setup.lines.two_photon != "distorted",
     )
     fine, coarse = (
@@ -334,6 +334,7 @@ def _record(setup: Setup, equations: SlowEquations, marched: Marched) -> FieldRe
         track.source[:count],
         log_distortion(track.sides[:count], lines.energy_ev[:, None], radiation_k[:, None, None]),
         equations.two_photon_rate_per_s if through_field else 0.0,
+        setup.lines.field_resolves,
     )
 
 

@@ -111,8 +111,12 @@ def setup_handover(setup: Setup, chosen: LineTreatment | None = None) -> Handove
     keeps = () if chosen is None else chosen.keeps
     scout = build_ladder(setup, min(setup.hydrogen.n_max, _SCOUT_N), keeps)
     reduced = with_scales(live_reduction(scout), scales(setup.physics))
+    return handover_of(setup, slow_equations(setup, reduced, chosen))
+
+
+def handover_of(setup: Setup, equations: SlowEquations) -> Handover:
+    """Where a run with these equations starts."""
     lag = 0.1 * setup.accuracy.relative
-    equations = slow_equations(setup, reduced, chosen)
     if isinstance(equations.treatment, ResolvedField):
         lag = max(lag, _FIELD_LAG)
     return find_handover(equations, lag)

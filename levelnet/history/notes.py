@@ -10,7 +10,9 @@ from .setup import Setup
 _NOTED = 20
 
 
-def notes_of(setup: Setup, chosen: LineTreatment) -> tuple[str, ...]:
+def notes_of(
+    setup: Setup, chosen: LineTreatment, warnings: tuple[str, ...] = ()
+) -> tuple[str, ...]:
     """What a user must know before relying on a history, or on what is made from it.
 
     Parameters
@@ -19,6 +21,8 @@ def notes_of(setup: Setup, chosen: LineTreatment) -> tuple[str, ...]:
         What was computed.
     chosen : LineTreatment
         The treatment of the resonance lines that was used.
+    warnings : tuple of str
+        Limits crossed by its figures, where there are any (:mod:`levelnet.history.limits`).
 
     Returns
     -------
@@ -39,6 +43,7 @@ def notes_of(setup: Setup, chosen: LineTreatment) -> tuple[str, ...]:
         )
     notes += [f"lines assume: {text}" for text in chosen.assumes]
     notes += [f"lines hold for: {text}" for text in chosen.holds_for]
+    notes += warnings
     if setup.lines.two_photon == "stimulated":
         notes.append(STIMULATED_NOTE)
     table = setup.rates.table

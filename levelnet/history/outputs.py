@@ -10,7 +10,6 @@ from typing import NamedTuple
 import numpy as np
 from scipy.interpolate import CubicSpline
 
-from .. import constants as const
 from ..arrays import FloatArray
 from ..atomic.levels import level_name
 from ..atomic.physics import Scales
@@ -28,19 +27,21 @@ from ..network.populations import LevelPopulations, populations
 from ..network.tabulation import TabulatedReduction
 from ..numerics.stepping import Trajectory
 from .course import electron_fraction_at, state_at
-from .equations import Local, SlowEquations, ionized_and_neutral
+from .equations import Local, ionized_and_neutral
 from .integrate import Integrated, Progress
+from .limits import limit_notes
+from .notes import notes_of
 from .observables import milestones, optical_depth
 from .outcome import outcome_of, relaxation_hubble
 from .result import (
     Channels,
     Diagnostics,
     History,
-    LineFigures,
     Milestones,
     SpeciesPopulations,
 )
 from .setup import Setup
+from .validity import Steps, line_figures, steps_of
 
 _SMALLEST_LOG = math.log(1e-300)
 
@@ -54,10 +55,8 @@ class _Output(NamedTuple):
     relaxation_hubble: float
 
 
-def assemble_history(
-    setup: Setup, integrated: Integrated, notes: tuple[str, ...], tell: Progress
-) -> History:
-    """Work out all that was asked from the slow variables.
+def assemble_history(setup: Setup, integrated: Integrated, tell: Progress) -> History:
+    """Work out all that was asked from the slow variables, and what to know about it.
 
     Where the integration ended early the history ends there, with the outcome saying why.
     """
@@ -75,14 +74,21 @@ def assemble_history(
     hydrogen_cm3 = np.array([c.hydrogen_density_cm3 for c in conditions])
     depth, visibility, marks = _seen(integrated, redshift, hydrogen_cm3 * electron_fraction)
     ionized = np.array([c.ionized_fraction for c in conditions])
+    ground = np.array([c.ground_fraction for c in conditions])
     nothing = np.zeros(len(redshift))
+    steps = steps_of(integrated)
+    figures = line_figures(
+        integrated, steps, redshift, [o.local for o in outputs], [o.lost_per_s for o in outputs]
+    )
+    chosen = integrated.equations.treatment
+    warnings = limit_notes(redshift, ground / electron_fraction, figures, chosen)
     return History(
         setup,
         outcome,
         redshift,
         electron_fraction,
         ionized,
-        np.array([c.ground_fraction for c in conditions]),
+        ground,
         nothing + 1.0,
         nothing,
         nothing,
@@ -94,11 +100,11 @@ def assemble_history(
         depth,
         visibility,
         (_species(integrated, outputs),),
-        channels(integrated, redshift, np.array([o.local.solution.flow for o in outputs])),
-        _line_figures(integrated, outputs),
+        channels(integrated, steps, redshift, np.array([o.local.solution.flow for o in outputs])),
+        figures,
         marks,
         _diagnostics(integrated, outputs, slowest),
-        notes,
+        notes_of(setup, chosen, warnings),
         None if integrated.field is None else integrated.field.field,
     )
 
@@ -164,13 +170,15 @@ def _species(integrated: Integrated, outputs: list[_Output]) -> SpeciesPopulatio
     return SpeciesPopulations(ladder.species, levels, population, log_departure)
 
 
-def channels(integrated: Integrated, redshift: FloatArray, net: FloatArray) -> Channels:
+def channels(
+    integrated: Integrated, steps: Steps, redshift: FloatArray, net: FloatArray
+) -> Channels:
     """Channels from the net flows to the ground state, shape (n_redshift, n_kept), s^-1."""
     kept = integrated.ladder.kept
     levels = zip(kept.n.tolist(), kept.l.tolist(), strict=True)
     names = tuple(f"{level_name(n, l)}-1s" for n, l in levels)
     share = net / net.sum(axis=1, keepdims=True)
-    cumulative = _cumulative(integrated.equations, integrated.trajectory)(-np.log1p(redshift))
+    cumulative = _cumulative(integrated.trajectory, steps.share)(-np.log1p(redshift))
     total = cumulative.sum(axis=1, keepdims=True)
     # Above the hand-over nothing has been added up yet: the share of that moment stands in.
     begun = total > 0.0
@@ -178,51 +186,18 @@ def channels(integrated: Integrated, redshift: FloatArray, net: FloatArray) -> C
     return Channels(names, net, share, cumulative)
 
 
-def _cumulative(
-    equations: SlowEquations, trajectory: Trajectory
-) -> Callable[[FloatArray], FloatArray]:
+def _cumulative(trajectory: Trajectory, share: FloatArray) -> Callable[[FloatArray], FloatArray]:
     """Net recombinations per hydrogen nucleus since the hand-over, by channel, over ln a.
 
     The share of each channel is integrated over the change of x_HI: early on, where the equations
     are stiff, the net flow itself holds the local error times the relaxation rate.
     """
     if len(trajectory.time) < 2:
-        return lambda s: np.zeros((len(s), len(equations.reduced.kept)))
-    shares = []
-    for s, state in zip(trajectory.time.tolist(), trajectory.state, strict=True):
-        flow = equations.local(s, state).solution.flow
-        shares.append(flow / flow.sum())
+        return lambda s: np.zeros((len(s), share.shape[1]))
     neutral = np.array([ionized_and_neutral(u)[1] for u in trajectory.state[:, 0].tolist()])
     gain = CubicSpline(trajectory.time, neutral).derivative()(trajectory.time)
-    total = CubicSpline(trajectory.time, gain[:, None] * np.array(shares)).antiderivative()
+    total = CubicSpline(trajectory.time, gain[:, None] * share).antiderivative()
     return lambda s: np.asarray(total(np.maximum(s, trajectory.time[0])))
-
-
-def _line_figures(integrated: Integrated, outputs: list[_Output]) -> LineFigures:
-    lines = integrated.equations.lines
-    unknown = np.full(len(lines.names), np.nan)
-    columns: list[tuple[FloatArray, ...]] = []
-    for output in outputs:
-        figures, conditions = output.local.coupling.validity, output.local.conditions
-        depth = figures.get("optical_depth", unknown)
-        doppler = doppler_width(conditions)
-        frequency_hz = lines.energy_ev / const.PLANCK_EV_S
-        damping = lines.decay_rate_per_s / (4.0 * np.pi * doppler * frequency_hz)
-        # A Lorentz wing is thick out to a tau / pi Doppler widths, the core to sqrt(ln tau).
-        core = np.sqrt(np.log(np.maximum(depth, 1.0)))
-        wing = damping * depth / np.pi
-        lost = output.lost_per_s[lines.upper]
-        lost = lost / (lost + lines.einstein_a_per_s)
-        columns.append(
-            (
-                depth,
-                figures.get("escape_probability", unknown),
-                damping,
-                2.0 * doppler * np.maximum(core, wing),
-                2.0 * doppler * np.maximum(core, lost * wing),
-            )
-        )
-    return LineFigures(lines.names, *(np.array(column) for column in zip(*columns, strict=True)))
 
 
 def _lost_per_s(factored: FactoredInterior) -> FloatArray:
@@ -231,14 +206,6 @@ def _lost_per_s(factored: FactoredInterior) -> FloatArray:
     lines = np.array([np.exp(one.log_out).sum() for one in factored.kept_lines])
     photo = interior_photoionization(ladder, factored.radiation_temperature_k)
     return np.asarray(lines + photo[ladder.kept_position])
-
-
-def doppler_width(conditions: Conditions) -> float:
-    """Doppler width over frequency of a hydrogen line, sqrt(2 k T_m / m_H) / c."""
-    speed = math.sqrt(
-        2.0 * const.BOLTZMANN_ERG_K * conditions.matter_temperature_k / const.HYDROGEN_ATOM_MASS_G
-    )
-    return speed / const.SPEED_OF_LIGHT_CM_S
 
 
 def _diagnostics(integrated: Integrated, outputs: list[_Output], slowest: float) -> Diagnostics:

@@ -10,6 +10,7 @@ import numpy as np
 from ..arrays import FloatArray, frozen_array
 from ..atomic.levels import LevelSet
 from ..errors import InputError, Outcome, SolveError
+from .line_figures import LineFigures
 from .setup import Setup
 
 if TYPE_CHECKING:
@@ -70,49 +71,6 @@ class Channels:
         """Check shapes and make every array read-only."""
         shape = (len(self.share), len(self.names))
         for name in ("net_rate_per_s", "share", "cumulative_share"):
-            frozen_array(self, name, shape)
-
-
-@dataclass(frozen=True, slots=True, eq=False)
-class LineFigures:
-    """Validity figures of the line-escape treatment, per line and redshift.
-
-    Attributes
-    ----------
-    names : tuple of str
-        The lines: "2p-1s" (Lyman-alpha), "3p-1s", ...
-    optical_depth : ndarray, shape (n_redshift, n_lines), dimensionless
-        Sobolev optical depth.
-    escape_probability : ndarray, shape (n_redshift, n_lines), dimensionless
-        Chance that a photon of the line escapes, as the treatment has it.
-    damping_parameter : ndarray, shape (n_redshift, n_lines), dimensionless
-        Voigt parameter: total decay rate over 4 pi times the Doppler width.
-    thick_width_scattering : ndarray, shape (n_redshift, n_lines), dimensionless
-        Width over frequency in which the line is optically thick to scattering (the same number is
-        the time to redshift across it in Hubble times). Wings scatter coherently and neither make
-        nor destroy photons, so values above 1 do not by themselves spoil a treatment.
-    thick_width_absorption : ndarray, shape (n_redshift, n_lines), dimensionless
-        The same for true absorption: scattering times the chance that the excited atom goes
-        anywhere but back to the ground state. Complete redistribution asks it to be far below 1.
-    """
-
-    names: tuple[str, ...]
-    optical_depth: FloatArray
-    escape_probability: FloatArray
-    damping_parameter: FloatArray
-    thick_width_scattering: FloatArray
-    thick_width_absorption: FloatArray
-
-    def __post_init__(self) -> None:
-        """Check shapes and make every array read-only."""
-        shape = (len(self.optical_depth), len(self.names))
-        for name in (
-            "optical_depth",
-            "escape_probability",
-            "damping_parameter",
-            "thick_width_scattering",
-            "thick_width_absorption",
-        ):
             frozen_array(self, name, shape)
 
 

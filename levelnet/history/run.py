@@ -10,7 +10,6 @@ from ..numerics.threads import one_blas_thread
 from ..pieces import Pieces
 from .cost import check_memory
 from .integrate import Progress, integrate_history
-from .notes import notes_of
 from .outputs import assemble_history
 from .result import History
 from .setup import Setup
@@ -69,8 +68,7 @@ def solve(
     check_memory(setup)
     with one_blas_thread():
         integrated = integrate_history(setup, tell, pieces, line_treatment)
-        notes = notes_of(setup, integrated.equations.treatment)
-        history = assemble_history(setup, integrated, notes, tell)
+        history = assemble_history(setup, integrated, tell)
     if strict:
         history.require_converged()
     elif not history.outcome.ok:

@@ -10,11 +10,11 @@ from typing import TYPE_CHECKING, Any
 
 from ..atomic.levels import LevelSet
 from ..errors import FileFormatError, InputError, LevelnetError
+from ..history.line_figures import LineFigures
 from ..history.result import (
     Channels,
     Diagnostics,
     History,
-    LineFigures,
     Milestones,
     RadiationField,
     SpeciesPopulations,
@@ -32,7 +32,7 @@ from .table_layout import DISTILLED_LAYOUT, TABLE_LAYOUT
 from .weighing_layout import WEIGHING_LAYOUT
 
 if TYPE_CHECKING:
-    from ..distilled.history import FastHistory
+    from ..distilled.fast import FastHistory
     from ..distilled.table import EffectiveTable
     from ..studies.escape_records import EscapeStudy
     from ..studies.level_records import LevelStudy
@@ -161,7 +161,7 @@ def history_of(content: Content) -> History:
 
 def distilled_of(content: Content) -> FastHistory:
     """Make the history that :func:`levelnet.store.write.write_distilled` took apart."""
-    from ..distilled.history import FastHistory
+    from ..distilled.fast import FastHistory
     from ..distilled.observables import Observables
 
     parts = all_fields(content, DISTILLED_LAYOUT)

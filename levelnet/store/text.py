@@ -19,7 +19,7 @@ from .table_layout import DISTILLED
 from .whole_file import whole_file
 
 if TYPE_CHECKING:
-    from ..distilled.history import FastHistory
+    from ..distilled.fast import FastHistory
 
 # A cubic spline needs four points; every second of seven rows are four.
 _FEWEST_ROWS = 7

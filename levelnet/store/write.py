@@ -28,7 +28,7 @@ from .whole_file import whole_file
 if TYPE_CHECKING:
     import h5py
 
-    from ..distilled.history import FastHistory
+    from ..distilled.fast import FastHistory
     from ..distilled.table import EffectiveTable
     from ..studies.escape_records import EscapeStudy
     from ..studies.level_records import LevelStudy

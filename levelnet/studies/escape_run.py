@@ -14,6 +14,7 @@ from ..history.outcome import outcome_of, relaxation_hubble
 from ..history.outputs import channels
 from ..history.result import Channels, RadiationField
 from ..history.setup import Setup
+from ..history.validity import steps_of
 from ..numerics.threads import one_blas_thread
 from ..pieces import Pieces
 from .rung import integrate_observed, observed
@@ -106,7 +107,7 @@ def compute_variant(
             seen.names,
             seen.units,
             seen.value,
-            channels(integrated, redshift, flows),
+            channels(integrated, steps_of(integrated), redshift, flows),
             integrated.field.field if integrated.field and job.with_field else None,
             outcome_of(setup, integrated, map(relaxation_hubble, here)),
         )

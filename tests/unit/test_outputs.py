@@ -11,7 +11,6 @@ import pytest
 from scipy import constants as si
 from scipy.integrate import cumulative_simpson, simpson
 
-from levelnet.atomic.bound_bound import einstein_a
 from levelnet.atomic.physics import UNCHANGED
 from levelnet.errors import AccuracyWarning
 from levelnet.history import outputs
@@ -19,7 +18,8 @@ from levelnet.history.atom import build_ladder, lyman_lines
 from levelnet.history.integrate import integrate_history
 from levelnet.history.result import History
 from levelnet.history.run import solve
-from tests.small_runs import COSMOLOGY, RECOMBINING, small_history, small_setup
+from levelnet.history.validity import steps_of
+from tests.small_runs import COSMOLOGY, small_history, small_setup
 from tests.tolerances import ROUND_OFF
 
 
@@ -63,7 +63,7 @@ def test_electrons_gone_since_the_hand_over_are_counted() -> None:
 
     done = integrate_history(small_setup(4), lambda stage, part: None)
     ends = done.trajectory.time[[0, -1]]
-    total = outputs._cumulative(done.equations, done.trajectory)(ends).sum(axis=1)
+    total = outputs._cumulative(done.trajectory, steps_of(done).share)(ends).sum(axis=1)
     neutral = [1.0 / (1.0 + math.exp(u)) for u in done.trajectory.state[[0, -1], 0]]
     assert total[0] == 0.0
     assert total[1] == pytest.approx(neutral[1] - neutral[0], rel=1e-5)
@@ -140,45 +140,6 @@ def test_populations_below_the_smallest_are_nothing() -> None:
     assert found.population[0, 2] == pytest.approx(1e-300, rel=1e-6)
     np.testing.assert_allclose(np.log(found.population[0, 2:]), logs[2:], rtol=ROUND_OFF)
     assert found.log_departure[0].tolist() == [0.0, 1.0, 2.0, 3.0]
-
-
-def test_line_figures_from_the_formulas() -> None:
-    # Doppler width sqrt(2 k T/m_H)/c; Voigt parameter: decay rate over 4 pi times it.
-    history = open_history()
-    k = int(np.argmin(np.abs(history.redshift - 1100.0)))
-    atom = si.m_p + si.m_e
-    doppler = math.sqrt(2.0 * si.k * history.matter_temperature_k[k] / atom) / si.c
-    frequency = history.levels("H I").energy_ev[2] * si.e / si.h
-    decay = 6.2649e8  # s^-1, Wiese & Fuhr 2009, J. Phys. Chem. Ref. Data 38, 565 (from memory)
-    lines = history.lines
-    assert lines.names[0] == "2p-1s"
-    assert lines.damping_parameter[k, 0] == pytest.approx(
-        decay / (4.0 * math.pi * doppler * frequency), rel=1e-4
-    )
-    depth = lines.optical_depth[k, 0]
-    # Common practice: optical depth of Lyman-alpha some 1e8 to 1e9.
-    assert 1e8 < depth < 1e9
-    assert lines.escape_probability[k, 0] == pytest.approx(1.0 / depth, rel=1e-9)
-    # A Lorentz wing a/(sqrt(pi) x^2)/sqrt(pi) seen from afar has depth 1 where the photon needs to
-    # cross another x = a tau/pi.
-    thick = lines.damping_parameter[k, 0] * depth / math.pi
-    assert lines.thick_width_scattering[k, 0] == pytest.approx(2.0 * doppler * thick, rel=1e-9)
-    # Chance that 2p is excited or ionized before it falls to 1s, near 1.2e-4 at z = 1100: the
-    # stimulated 2p -> 3s, 3d, 4s, 4d alone, from A and the Planck function.
-    away = 0.0
-    for n in (3, 4):
-        photon = si.h * si.c * si.Rydberg * (0.25 - 1.0 / n**2)
-        occupation = 1.0 / math.expm1(photon / (si.k * history.radiation_temperature_k[k]))
-        for l in (0, 2):
-            away += float(einstein_a(n, l, 2, 1)) * (2 * l + 1) / 3.0 * occupation
-    ratio = lines.thick_width_absorption[k, 0] / lines.thick_width_scattering[k, 0]
-    assert ratio == pytest.approx(away / decay, rel=0.05)
-    assert 1e-4 < lines.thick_width_absorption[k, 0] < 2e-3
-
-
-def test_doppler_width() -> None:
-    speed = math.sqrt(2.0 * si.k * 2999.0 / (si.m_p + si.m_e))
-    assert outputs.doppler_width(RECOMBINING) == pytest.approx(speed / si.c, rel=1e-9)
 
 
 def test_diagnostics_are_those_of_this_run() -> None:

@@ -17,11 +17,11 @@ from scipy.special import logsumexp
 
 from levelnet.atomic.levels import hydrogenic_levels
 from levelnet.errors import InputError, Outcome
+from levelnet.history.line_figures import LineFigures
 from levelnet.history.result import (
     Channels,
     Diagnostics,
     History,
-    LineFigures,
     Milestones,
     SpeciesPopulations,
 )
@@ -87,7 +87,7 @@ def made_up_history(n_max: int = 10, n_redshifts: int = 60, n_lines: int = 1) ->
         visibility=4e-3 * np.exp(-0.5 * ((redshift - PEAK) / SIGMA) ** 2),
         species=(SpeciesPopulations("H I", levels, np.exp(-departure) * 1e-9, departure),),
         channels=Channels(names, 1e-13 * shares.T, shares.T, shares.T),
-        lines=LineFigures(names[1:], lines, lines, lines, lines, lines),
+        lines=LineFigures(names[1:], *(lines,) * 15),
         milestones=Milestones(PEAK, PEAK, GAUSS_FWHM * SIGMA, 1273.0, 1.2e13, 5e12),
         diagnostics=Diagnostics(1600.0, 1e-5, 200, 3, 900, 40, 1e-9, 1e-15, 1e6),
         notes=("no reionization",),

@@ -1,0 +1,115 @@
+"""Records of a history from a table, and of its derivatives."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from ..arrays import FloatArray, frozen_array
+from ..errors import Outcome
+from ..history.result import RadiationField
+from .observables import Observables
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Sensitivities:
+    """Derivatives of a history by its parameters; the last axis of each array is the parameter.
+
+    Attributes
+    ----------
+    parameters : tuple of str
+        The six of the cosmology (per unit of each), "fine_structure_change" and
+        "electron_mass_change" (per unit relative change), then "ln recombination_2s", ...: per unit
+        of the ln of a factor on the rate of that name, see :func:`rate_names`. Of the cosmology,
+        what is not varied is held; dark energy closes the budget; a tabulated expansion does not
+        move.
+    free_electron_fraction : ndarray, shape (n_redshift, n_parameters)
+        Of x_e at fixed redshift.
+    matter_temperature_k : ndarray, shape (n_redshift, n_parameters), K per unit
+        Of T_m.
+    last_scattering_redshift, sound_horizon_mpc, damping_per_mpc : ndarray, shape (n_parameters,)
+        Of z_*, r_s and k_D.
+    """
+
+    parameters: tuple[str, ...]
+    free_electron_fraction: FloatArray
+    matter_temperature_k: FloatArray
+    last_scattering_redshift: FloatArray
+    sound_horizon_mpc: FloatArray
+    damping_per_mpc: FloatArray
+
+    def __post_init__(self) -> None:
+        """Check shapes and make every array read-only."""
+        n = len(self.parameters)
+        for name in ("free_electron_fraction", "matter_temperature_k"):
+            frozen_array(self, name, (len(self.free_electron_fraction), n))
+        for name in ("last_scattering_redshift", "sound_horizon_mpc", "damping_per_mpc"):
+            frozen_array(self, name, (n,))
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class FastHistory:
+    """A history from a table; arrays of shape (n_redshift,) over descending redshift.
+
+    Attributes
+    ----------
+    outcome : Outcome
+        How it ended.
+    redshift : ndarray, dimensionless
+        As asked, descending.
+    free_electron_fraction : ndarray, dimensionless
+        n_e / n_H.
+    ionized_hydrogen_fraction, neutral_hydrogen_fraction : ndarray, dimensionless
+        n_HII and n_HI over n_H.
+    matter_temperature_k, radiation_temperature_k : ndarray, K
+        T_m and T_r.
+    start_redshift : float, dimensionless
+        Where Saha equilibrium was left.
+    n_steps, n_rejected : int
+        Accepted and rejected steps.
+    observables : Observables or None
+        z_*, r_s and k_D, where derivatives or they were asked for.
+    sensitivities : Sensitivities or None
+        Derivatives, where asked for.
+    field : RadiationField or None
+        The radiation field, where the line treatment resolves it.
+    frequency_error : float, dimensionless
+        Largest relative change of x_e on a frequency grid twice as coarse; 0 without a field.
+    """
+
+    outcome: Outcome
+    redshift: FloatArray
+    free_electron_fraction: FloatArray
+    ionized_hydrogen_fraction: FloatArray
+    neutral_hydrogen_fraction: FloatArray
+    matter_temperature_k: FloatArray
+    radiation_temperature_k: FloatArray
+    start_redshift: float
+    n_steps: int
+    n_rejected: int
+    observables: Observables | None = None
+    sensitivities: Sensitivities | None = None
+    field: RadiationField | None = None
+    frequency_error: float = 0.0
+
+    def __post_init__(self) -> None:
+        """Check shapes and make every array read-only."""
+        for name in (
+            "redshift",
+            "free_electron_fraction",
+            "ionized_hydrogen_fraction",
+            "neutral_hydrogen_fraction",
+            "matter_temperature_k",
+            "radiation_temperature_k",
+        ):
+            frozen_array(self, name, (len(self.redshift),))
+
+
+def fractions(log_odds: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """x_HII and x_HI (dimensionless) from u, each to full relative precision."""
+    small = np.exp(-np.abs(log_odds))
+    large = 1.0 / (1.0 + small)
+    small *= large
+    hot = log_odds > 0.0
+    return np.where(hot, large, small), np.where(hot, small, large)
