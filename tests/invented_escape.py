@@ -14,6 +14,8 @@ from levelnet.studies.escape_plan import STIMULATED, Plan, Variant
 from levelnet.studies.escape_records import EscapeStudy
 from tests.small_runs import small_setup
 
+SWITCHED = ("stimulated", "feedback")
+
 
 def cheap_plan(setup: Setup) -> Plan:
     """Feedback and stimulation as the switches of a reference that is Sobolev with both."""
@@ -30,10 +32,11 @@ def cheap_plan(setup: Setup) -> Plan:
             variant("Sobolev with feedback", hydrogen="sobolev_feedback"),
             variant("everything", hydrogen="sobolev_feedback", two_photon="stimulated"),
         ),
+        switched_on=tuple(frozenset(on) for on in ((), (), SWITCHED[:1], SWITCHED[1:], SWITCHED)),
         treatments=(0, 1, 2, 3),
         base=1,
         reference=4,
-        switches=("stimulated", "feedback"),
+        switches=SWITCHED,
         alone=(2, 3),
         removed=(3, 2),
         cumulative=(2, 4),

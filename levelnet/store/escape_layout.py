@@ -25,6 +25,9 @@ def _one(name: str, long_name: str, field: str) -> Variable:
 
 
 _CHANNEL = layout.CHANNELS.variables[1]
+_SWITCH = Variable(
+    "switch", ("switch",), "", "name, in the order of adding", "switches.name", "text"
+)
 
 VARIANTS = Group(
     "variants",
@@ -37,6 +40,8 @@ VARIANTS = Group(
         Variable("variant", ("variant",), "", "name of the variant", "variants.name", "text"),
         _by_variant("lines", "", "table [lines] of its setup, as TOML", kind="text"),
         _by_variant("outcome", "", "how it ended: name of an Outcome", kind="text"),
+        _SWITCH,
+        _by_variant("switched_on", "1", "1 for a switch that is on", "switch", kind="int64"),
         _by_variant(
             "free_electron_fraction", "1", "free electrons per hydrogen nucleus", "redshift"
         ),
@@ -68,9 +73,7 @@ SWITCHES = Group(
     "switches",
     "what is switched on and off in the reference: positions of variants",
     (
-        Variable(
-            "switch", ("switch",), "", "name, in the order of adding", "switches.name", "text"
-        ),
+        _SWITCH,
         _one("base", "every switch off", "switches.base"),
         _by_switch("alone", "this switch on (and what it needs)"),
         _by_switch("removed", "all switches on but this one (and what needs it)"),

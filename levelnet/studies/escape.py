@@ -195,6 +195,7 @@ def _variants(plan: Plan, results: list[VariantResult]) -> Variants:
         tuple(one.name for one in plan.variants),
         tuple(tomli_w.dumps(_without_none(one)) for one in texts),
         tuple(one.outcome.name for one in results),
+        np.array([[name in on for name in plan.switches] for on in plan.switched_on]),
         np.array([one.electron_fraction for one in results]),
         np.array([one.matter_temperature_k for one in results]),
         np.array([one.observable for one in results]),

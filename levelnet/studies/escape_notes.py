@@ -51,7 +51,7 @@ def _enough_text(found: EscapeVerdict) -> str:
         )
     one = found.candidates[found.enough]
     if one.variant == own.variant:
-        return f"{goal}you need all of {one.name}; {reference} is within"
+        return f"{goal}you need {one.name}; {reference} is within"
     text = (
         f"{goal}{one.name} is enough; it errs by {percent(one.error)} at most, at z = "
         f"{one.redshift:.0f}, {reference} counted"
@@ -95,10 +95,9 @@ def escape_notes(study: EscapeStudy) -> tuple[str, ...]:
     low, high = asked_range(study)
     inside = outputs_between(study.redshift, 1.0, low, high)
     own = float(np.max(study.reference_error.free_electron_fraction[inside]))
-    outcomes = zip(study.variants.name, study.variants.outcome, strict=True)
     return (
         *(worse_text(one) for one in worse_than_absent(study, low, high)),
-        *(f"{name}: {Outcome[one].value}" for name, one in outcomes if not Outcome[one].ok),
+        *_outcome_notes(study),
         f"errors are differences from the reference, {study.variants.name[study.reference]}, whose "
         f"own numerical error of x_e is at most {percent(own)} there; what its physics leaves out "
         "(collisions, helium, lines above lyman_lines) is in none of them",
@@ -107,6 +106,15 @@ def escape_notes(study: EscapeStudy) -> tuple[str, ...]:
         "effects of single switches depend on which others are on: first, last and in order are "
         "all right, each for its question",
     )
+
+
+def _outcome_notes(study: EscapeStudy) -> tuple[str, ...]:
+    """Which variants did not end well; each way to end once."""
+    names: dict[Outcome, list[str]] = {}
+    for name, outcome in zip(study.variants.name, study.variants.outcome, strict=True):
+        if not Outcome[outcome].ok:
+            names.setdefault(Outcome[outcome], []).append(name)
+    return tuple(f"{'; '.join(some)}: {outcome.value}" for outcome, some in names.items())
 
 
 def _check_notes(study: EscapeStudy, low: float, high: float) -> tuple[str, ...]:
@@ -133,8 +141,8 @@ def _line_notes(study: EscapeStudy) -> tuple[str, ...]:
 
 
 def percent(value: float) -> str:
-    """A fraction in per cent, two digits."""
-    return f"{100.0 * value:.2g} %" if value < 0.995 else f"{100.0 * value:.0f} %"
+    """A fraction in per cent, three digits."""
+    return f"{100.0 * value:.3g} %"
 
 
 def _capital(name: str) -> str:

@@ -49,6 +49,8 @@ class Plan(NamedTuple):
     ----------
     variants : tuple of Variant
         What is run.
+    switched_on : tuple of frozenset of str
+        Switches that are on in each; none in treatments without a field.
     treatments : tuple of int
         Treatments without a field, from the simplest on.
     base, reference : int
@@ -63,6 +65,7 @@ class Plan(NamedTuple):
     """
 
     variants: tuple[Variant, ...]
+    switched_on: tuple[frozenset[str], ...]
     treatments: tuple[int, ...]
     base: int
     reference: int
@@ -91,20 +94,19 @@ def escape_plan(setup: Setup, order: Iterable[str] | None = None) -> Plan:
         If the order lacks a switch, has an unknown one, or puts one before what it needs.
     """
     switches = tuple(SWITCHES) if order is None else _checked(tuple(order))
-    found: list[Variant] = []
-
-    def place(name: str, lines: Lines) -> int:
-        for k, one in enumerate(found):
-            if one.lines == lines:
-                return k
-        found.append(Variant(name, lines))
-        return len(found) - 1
+    found = [Variant(name, lines) for name, lines in _without_field(setup.lines)]
+    treatments = tuple(range(len(found)))
+    places: dict[frozenset[str], int] = {}
 
     def having(chosen: Iterable[str], name: str) -> int:
-        return place(name, transfer_lines(setup.lines, frozenset(chosen)))
+        on = frozenset(chosen)
+        if on not in places:
+            places[on] = len(found)
+            found.append(Variant(name, transfer_lines(setup.lines, on)))
+        return places[on]
 
-    treatments = tuple(place(name, lines) for name, lines in _without_field(setup.lines))
-    base, reference = having((), "transfer without switches"), having(switches, "transfer")
+    base = having((), "transfer without switches")
+    reference = having(switches, "transfer with every switch")
     sets = [switches[: k + 1] for k in range(len(switches))]
     cumulative = tuple(having(one, f"transfer with {', '.join(one)}") for one in sets)
     alone = tuple(having(_with_needs(one), f"transfer with {one} alone") for one in switches)
@@ -115,6 +117,7 @@ def escape_plan(setup: Setup, order: Iterable[str] | None = None) -> Plan:
     coarser = Variant(f"{whole.name}, cells twice as wide", _coarser(variant_setup(setup, whole)))
     return Plan(
         tuple(found),
+        (*(frozenset[str]() for _ in treatments), *places),
         treatments,
         base,
         reference,

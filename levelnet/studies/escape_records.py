@@ -23,6 +23,8 @@ class Variants:
         Its table [lines] as TOML.
     outcome : tuple of str, length n_variants
         Name of the Outcome of each.
+    switched_on : ndarray of int, shape (n_variants, n_switches)
+        1 for each switch that is on; 0 in treatments without a field.
     free_electron_fraction : ndarray, shape (n_variants, n_redshift), dimensionless
         n_e/n_H.
     matter_temperature_k : ndarray, shape (n_variants, n_redshift), K
@@ -36,6 +38,7 @@ class Variants:
     name: tuple[str, ...]
     lines: tuple[str, ...]
     outcome: tuple[str, ...]
+    switched_on: IntArray
     free_electron_fraction: FloatArray
     matter_temperature_k: FloatArray
     observable: FloatArray
@@ -44,6 +47,7 @@ class Variants:
     def __post_init__(self) -> None:
         """Check shapes and make every array read-only."""
         count = len(self.name)
+        frozen_array(self, "switched_on", (count, *self.switched_on.shape[1:]), int)
         for name in (
             "free_electron_fraction",
             "matter_temperature_k",

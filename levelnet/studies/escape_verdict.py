@@ -65,13 +65,13 @@ class EscapeVerdict:
     low, high : float, dimensionless
         Between which redshifts.
     candidates : tuple of Candidate
-        Treatments without a field, from the simplest on; then the base and the cumulative sets of
-        switches. The last is the reference.
+        Treatments without a field, from the simplest on; then those with one, by the number of
+        switches that are on. The last is the reference.
     enough : int or None
         Position of the first candidate that passes; None where none does.
     relapse : int or None
-        Position of a larger set of switches that does not pass although `enough` does: what passes
-        then owes it to effects that cancel.
+        Position of a candidate with the same switches and more, or a field where `enough` has none,
+        that does not pass: what passes then owes it to effects that cancel.
     """
 
     within: float
@@ -139,9 +139,10 @@ def largest_difference(study: EscapeStudy, variant: int, low: float, high: float
 
 def candidates_of(study: EscapeStudy) -> tuple[int, ...]:
     """Positions of the variants that a user would choose, from the simplest on."""
-    switches = study.switches
-    every = (*study.treatments.tolist(), switches.base, *switches.cumulative.tolist())
-    return tuple(dict.fromkeys(every))
+    counts = study.variants.switched_on.sum(axis=1).tolist()
+    treatments = study.treatments.tolist()
+    others = [k for k in range(len(counts)) if k not in treatments]
+    return (*treatments, *sorted(others, key=lambda k: (counts[k], k)))
 
 
 def escape_verdict(study: EscapeStudy, within: float, low: float, high: float) -> EscapeVerdict:
@@ -171,10 +172,18 @@ def escape_verdict(study: EscapeStudy, within: float, low: float, high: float) -
         place = float(study.redshift[inside][worst])
         found.append(Candidate(study.variants.name[k], k, error, place, error <= within))
     enough = next((k for k, one in enumerate(found) if one.passed), None)
-    sets = set(study.switches.cumulative.tolist())
-    later = range(len(found) if enough is None else enough + 1, len(found))
-    relapse = next((k for k in later if found[k].variant in sets and not found[k].passed), None)
+    relapse = None if enough is None else _relapse(study, found, enough)
     return EscapeVerdict(within, low, high, tuple(found), enough, relapse)
+
+
+def _relapse(study: EscapeStudy, found: list[Candidate], enough: int) -> int | None:
+    """First candidate after `enough` with all of its physics and more that does not pass."""
+    on, first_field = study.variants.switched_on, len(study.treatments)
+    less = on[found[enough].variant]
+    for k in range(max(enough + 1, first_field), len(found)):
+        if np.all(on[found[k].variant] >= less) and not found[k].passed:
+            return k
+    return None
 
 
 def escape_demands(study: EscapeStudy, requirement: Requirement) -> EscapeDemands:

@@ -11,7 +11,14 @@ import pytest
 
 from levelnet.errors import InputError
 from levelnet.escape.lines import Lines
-from levelnet.studies.escape_plan import SWITCHES, Plan, escape_plan, transfer_lines, variant_setup
+from levelnet.studies.escape_plan import (
+    SWITCHES,
+    Plan,
+    Variant,
+    escape_plan,
+    transfer_lines,
+    variant_setup,
+)
 from tests.small_runs import small_setup
 
 ORDERS = (
@@ -59,6 +66,9 @@ def test_every_question_has_its_variant(order: tuple[str, ...] | None) -> None:
         assert on[made.removed[k]] == left
         assert on[made.cumulative[k]] == set(made.switches[: k + 1])
     assert made.cumulative[-1] == made.reference
+    assert [one or set() for one in on] == [set(one) for one in made.switched_on]
+    assert made.coarser is not None
+    assert switches_on(made.coarser.lines) == every
 
 
 @pytest.mark.parametrize("order", ORDERS)
@@ -87,6 +97,10 @@ def test_what_is_no_switch_is_kept() -> None:
             assert one.lines.transfer.frequency_step == 1e-3
     full = transfer_lines(setup.lines, frozenset(SWITCHES))
     assert full == setup.lines
+    coarser = escape_plan(setup).coarser
+    assert coarser is not None
+    assert coarser.lines.transfer is not None
+    assert coarser.lines.transfer.frequency_step == 2e-3
 
 
 @pytest.mark.parametrize(
@@ -105,7 +119,7 @@ def test_orders_that_are_none(order: tuple[str, ...], message: str) -> None:
 
 def test_variant_that_does_not_fit_is_named() -> None:
     setup = small_setup(13, lines={"lyman_lines": 12})
-    made = escape_plan(setup)
-    (one,) = (v for v in made.variants if v.name == "Sobolev with feedback")
+    lines = Lines(hydrogen="sobolev_feedback", lyman_lines=12)
+    one = Variant("Sobolev with feedback", lines)
     with pytest.raises(InputError, match=r"Sobolev with feedback: .*12 lines with feedback"):
         variant_setup(setup, one)

@@ -143,10 +143,15 @@ def test_verdict_takes_the_first_that_is_within() -> None:
 def test_verdict_says_where_effects_cancel() -> None:
     # Plain Sobolev is near, and with more of the physics further away.
     peaks = {"closed": 0.4, "Sobolev": 1e-4, "Sobolev, 2s decay stimulated": -0.02}
-    study = with_differences(peaks)
+    study = dataclasses.replace(with_differences(peaks), treatments=np.array([0, 1]))
     found = escape_verdict(study, 1e-3, *ASKED)
     assert found.enough == 1
     assert found.relapse == 2
+    # Not where what fails has not all the physics of what passes.
+    peaks["Sobolev"] = 0.02
+    other = dataclasses.replace(with_differences(peaks), treatments=np.array([0, 1]))
+    assert escape_verdict(other, 1e-3, *ASKED).enough == 3
+    assert escape_verdict(other, 1e-3, *ASKED).relapse is None
     text = verdict_texts(study, found)[-1]
     assert "ITS EFFECTS CANCEL: Sobolev, 2s decay stimulated, which has more" in text
     assert "errs by 2 %" in text
@@ -156,7 +161,7 @@ def test_verdict_needs_the_reference_or_nothing() -> None:
     peaks = {name: 0.1 for name in cheap_study().variants.name[:-1]}
     found = escape_verdict(with_differences(peaks, 1e-4), 1e-3, *ASKED)
     assert found.enough == len(found.candidates) - 1
-    assert "you need all of everything" in verdict_texts(cheap_study(), found)[-1]
+    assert "you need everything; the numerical error" in verdict_texts(cheap_study(), found)[-1]
     # A reference that is not known well enough is not enough either.
     study = with_differences(peaks, 2e-3)
     found = escape_verdict(study, 1e-3, *ASKED)
