@@ -23,7 +23,7 @@ from .lines import RAMAN_LEVELS, Lines, Transfer
 from .treatment import ResonanceLines
 
 # ln(nu/nu_Lya) out to which scattering is followed: there it has fallen to 1e-4 of its effect.
-_SCATTERING_REACH = 0.05
+_SCATTERING_REACH = 0.03
 # Gauss points in a cell, and within how many cells of a line more are used.
 _POINTS, _MORE_POINTS, _NEAR = 2, 8, 12
 

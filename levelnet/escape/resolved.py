@@ -18,6 +18,9 @@ from ..network.solve import log_boltzmann_populations
 from .treatment import ResonanceLines, Sobolev
 from .two_photon import with_two_photon
 
+# exp of more is no double.
+_LARGEST_EXPONENT = 700.0
+
 
 @dataclass(frozen=True, slots=True, eq=False)
 class FieldRecord:
@@ -160,6 +163,6 @@ def log_distortion(
     exponent = energy_ev / (const.BOLTZMANN_EV_K * radiation_temperature_k)
     with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
         above = np.logaddexp(0.0, np.log(departure) + exponent)
-        below = np.log1p(departure * np.exp(exponent))
-    # No departure times an exponential that overflows is still none.
-    return np.where(departure > 0.0, above, np.where(departure == 0.0, 0.0, below))
+        # Only what lies below the blackbody, or on it: there nothing is lost by the limit.
+        below = np.log1p(departure * np.exp(np.minimum(exponent, _LARGEST_EXPONENT)))
+    return np.where(departure > 0.0, above, below)

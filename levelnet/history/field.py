@@ -55,6 +55,8 @@ class FieldRun(NamedTuple):
         d ln nu, and the largest relative change of x_e at the outputs on a grid twice as coarse.
     photon_number_error, atom_number_error : float, dimensionless
         Largest relative imbalance in any step.
+    steps : int
+        Steps of the march; the trajectory has fewer points.
     """
 
     equations: SlowEquations
@@ -64,6 +66,7 @@ class FieldRun(NamedTuple):
     frequency_error: float
     photon_number_error: float
     atom_number_error: float
+    steps: int
 
 
 class Marched(NamedTuple):
@@ -282,6 +285,7 @@ def resolve_field(
         float(np.max(np.abs(there / less - 1.0))),
         float(marched.track.report[2]),
         float(marched.track.report[3]),
+        len(marched.time) - 1,
     )
 
 

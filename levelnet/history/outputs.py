@@ -216,7 +216,7 @@ def _diagnostics(integrated: Integrated, outputs: list[_Output], slowest: float)
     return Diagnostics(
         integrated.handover.redshift,
         integrated.handover.departure,
-        len(trajectory.time) - 1,
+        len(trajectory.time) - 1 if integrated.field is None else integrated.field.steps,
         trajectory.rejected,
         trajectory.evaluations,
         nodes,

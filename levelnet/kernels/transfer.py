@@ -385,10 +385,11 @@ def advance_field(
         d[i] = departure[cells.level[i]] / (weight_ratio[cells.level[i]] * own)
     out = room.scaled[0] if n_levels else np.empty(n_cells)
     for j in range(n_cells):
-        emitted = 0.0
+        # First times the mean, as in K: far below the line in a cold field it is as large as the
+        # rest is small.
+        gain = -room.absorption[j] * room.lit[j]
         for i in range(n_levels):
-            emitted += room.unit[i, j] * d[i]
-        gain = emitted * room.mean[j] - room.absorption[j] * room.lit[j]
+            gain += room.unit[i, j] * room.mean[j] * d[i]
         out[j] = room.field[j] + gain / (moment.packet_per_s * cells.growth[j])
     first, n = cells.first_scattering, room.theta.shape[0]
     core = departure[cells.line_upper[0]] / (moment.ground * weight_ratio[cells.line_upper[0]])
@@ -568,36 +569,82 @@ def _matter_lag(before: float, compton: float, step: float) -> float:
     return v
 
 
-@kernel
-def _flow(
-    cells: Cells,
-    path: Path,
-    moment: Moment,
-    stored: FloatArray,
-    pairs: FloatArray,
-    room: Room,
-    interior: FloatArray,
-    loss: FloatArray,
-    source: FloatArray,
-    departure: FloatArray,
-) -> float:
-    """Net recombinations per hydrogen nucleus and second; NaN if the matrix is singular.
+class Balance(NamedTuple):
+    """The kept levels in the middle of a step.
 
-    `pairs` holds n_H x_e x_p in cm^-3 and ln of T_m over that of the stored rates.
+    Attributes
+    ----------
+    stored : ndarray, shape (n_stored,)
+        The series of the path there.
+    interior, loss : ndarray, shape (n_kept, n_kept), s^-1
+        M and K.
+    source, departure : ndarray, shape (n_kept,)
+        s less K x_B (s^-1), and d.
     """
+
+    stored: FloatArray
+    interior: FloatArray
+    loss: FloatArray
+    source: FloatArray
+    departure: FloatArray
+
+
+class Slow(NamedTuple):
+    """The slow variables in the middle of a step, and what the background says there.
+
+    Attributes
+    ----------
+    hubble_per_s, hydrogen_cm3, radiation_kt_ev : float
+        H, n_H, k T_r.
+    electrons, ground, lag : float
+        x_e, x_1s and v.
+    """
+
+    hubble_per_s: float
+    hydrogen_cm3: float
+    radiation_kt_ev: float
+    electrons: float
+    ground: float
+    lag: float
+
+
+@kernel
+def _moment(path: Path, slow: Slow) -> Moment:
+    """What the field needs to know of the conditions."""
+    packet = path.packet / slow.hydrogen_cm3
+    matter_kt = slow.radiation_kt_ev * math.exp(slow.lag)
+    return Moment(
+        slow.radiation_kt_ev,
+        matter_kt,
+        packet * slow.hubble_per_s,
+        slow.hydrogen_cm3 / slow.hubble_per_s,
+        path.scattering * path.packet * matter_kt,
+        slow.ground,
+    )
+
+
+@kernel
+def _flow(cells: Cells, path: Path, slow: Slow, room: Room, balance: Balance) -> float:
+    """Net recombinations per hydrogen nucleus and second; NaN if the matrix is singular."""
+    stored, loss, source, departure = (
+        balance.stored,
+        balance.loss,
+        balance.source,
+        balance.departure,
+    )
     n = departure.shape[0]
     for i in range(n):
         source[i] = 0.0
         for k in range(n):
             loss[i, k] = 0.0
     loss[0, 0] = math.exp(stored[-1])
-    couple_field(cells, moment, path.weight_ratio, room, loss, source)
-    log_pairs, log_ground = math.log(pairs[0]), math.log(moment.ground)
+    couple_field(cells, _moment(path, slow), path.weight_ratio, room, loss, source)
+    log_pairs = math.log(slow.hydrogen_cm3) + 2.0 * math.log(slow.electrons)
     for i in range(n):
-        log_capture = stored[i] + stored[n + i] * pairs[1] + log_pairs
-        log_lift = stored[2 * n + i] + log_ground
+        log_capture = stored[i] + stored[n + i] * (slow.lag - stored[-2]) + log_pairs
+        log_lift = stored[2 * n + i] + math.log(slow.ground)
         departure[i] = source[i] - math.exp(log_capture) * math.expm1(log_lift - log_capture)
-    matrix = interior + loss
+    matrix = balance.interior + loss
     if not solve_dense(matrix, departure):
         return math.nan
     total = 0.0
@@ -615,6 +662,104 @@ def _fractions(log_odds: float) -> tuple[float, float]:
     large = 1.0 / (1.0 + small)
     small *= large
     return (large, small) if log_odds > 0.0 else (small, large)
+
+
+class Attempt(NamedTuple):
+    """How a step went.
+
+    Attributes
+    ----------
+    gain, miss : float
+        Change of x_HI over the step, and by how much the flow in its middle makes it another.
+    slope : float
+        Derivative of the second by the first; negative.
+    flow : float, s^-1
+        Net recombinations per hydrogen nucleus.
+    slow : Slow
+        The middle of the step.
+    eliminations : int
+        Of the field and the levels; 0 if a matrix was singular.
+    done : bool
+        Whether the miss is within the tolerance.
+    """
+
+    gain: float
+    miss: float
+    slope: float
+    flow: float
+    slow: Slow
+    eliminations: int
+    done: bool
+
+
+@kernel
+def _settle(
+    cells: Cells,
+    path: Path,
+    here: Slow,
+    fractions: tuple[float, float],
+    guess: float,
+    slope: float,
+    limits: tuple[float, int],
+    room: Room,
+    balance: Balance,
+) -> Attempt:
+    """Find the change of x_HI over one step by the secant method.
+
+    `here` holds v at the start of the step; `fractions` x_HII and x_HI there; `limits` the relative
+    tolerance of the change, and the iterations allowed.
+    """
+    ionized, neutral = fractions
+    hubble = here.hubble_per_s
+    compton = path.compton * (here.radiation_kt_ev / path.radiation_kt_ev) ** 4 / hubble
+    before, last_guess, last_miss = here.lag, 0.0, 0.0
+    flow, miss, slow = 0.0, math.inf, here
+    for count in range(limits[1]):
+        if not -neutral < guess < ionized:
+            guess = max(-0.5 * neutral, min(0.5 * ionized, guess))
+        electrons, ground = ionized - 0.5 * guess, neutral + 0.5 * guess
+        share = electrons / (1.0 + path.helium_ratio + electrons)
+        v = _matter_lag(before, compton * share, cells.step)
+        slow = Slow(hubble, here.hydrogen_cm3, here.radiation_kt_ev, electrons, ground, v)
+        flow = _flow(cells, path, slow, room, balance)
+        if not math.isfinite(flow):
+            return Attempt(guess, miss, slope, flow, slow, 0, False)
+        miss = flow * cells.step / hubble - guess
+        if abs(miss) <= limits[0] * max(abs(guess), 1e-9 * min(neutral, ionized)):
+            return Attempt(guess, miss, slope, flow, slow, count + 1, True)
+        if count:
+            slope = min((miss - last_miss) / (guess - last_guess), -1e-3)
+        last_guess, last_miss = guess, miss
+        guess -= miss / slope
+    return Attempt(guess, miss, slope, flow, slow, limits[1], False)
+
+
+@kernel
+def _record(
+    step: int,
+    stride: int,
+    balance: Balance,
+    sides: FloatArray,
+    gained: float,
+    attempt: Attempt,
+    track: Track,
+) -> None:
+    """Leave behind what one step did, and how well photons and atoms were counted."""
+    n, decay = balance.departure.shape[0], math.exp(balance.stored[-1])
+    if step % stride == 0:
+        record = step // stride
+        for i in range(n):
+            track.source[record, i] = balance.source[i]
+            for k in range(n):
+                track.loss[record, i, k] = balance.loss[i, k]
+        track.loss[record, 0, 0] -= decay
+        track.sides[record] = sides
+    flow = max(abs(attempt.flow), 1e-300)
+    missing = abs(gained + decay * balance.departure[0] - attempt.flow) / flow
+    track.report[0] = step + 1.0
+    track.report[1] += attempt.eliminations
+    track.report[2] = max(track.report[2], missing)
+    track.report[3] = max(track.report[3], abs(attempt.miss) / max(abs(attempt.gain), 1e-300))
 
 
 @kernel
@@ -648,82 +793,46 @@ def march(
     room, track : Room, Track
         Work space; results.
     """
-    n_steps, D, n = track.state.shape[0] - 1, cells.step, path.weight_ratio.shape[0]
-    stored = np.empty(path.series.shape[2])
-    interior, loss = np.empty((n, n)), np.empty((n, n))
-    source, departure, pairs = np.empty(n), np.empty(n), np.empty(2)
+    n_steps, n = track.state.shape[0] - 1, path.weight_ratio.shape[0]
+    balance = Balance(
+        np.empty(path.series.shape[2]),
+        np.empty((n, n)),
+        np.empty((n, n)),
+        np.empty(n),
+        np.empty(n),
+    )
     sides = np.empty((cells.line_cell.shape[0], 2))
     gains = np.zeros(4)  # of the last steps, the latest first
-    slope, kept = 0.0, 0
+    slope, kept = -1.0, 0
     track.state[0, 0], track.state[0, 1] = first[1], first[2]
-    begin(cells, path.radiation_kt_ev * math.exp(-first[0] - 0.5 * D), room)
+    begin(cells, path.radiation_kt_ev * math.exp(-first[0] - 0.5 * cells.step), room)
+    fractions = _fractions(first[1])
     for step in range(n_steps):
-        middle = first[0] + (step + 0.5) * D
+        middle = first[0] + (step + 0.5) * cells.step
         kt = path.radiation_kt_ev * math.exp(-middle)
-        _stored(path, middle, stored)
-        hubble = math.exp(stored[-3])
-        hydrogen = path.hydrogen_cm3 * math.exp(-3.0 * middle)
-        compton = path.compton * math.exp(-4.0 * middle) / hubble
+        _stored(path, middle, balance.stored)
         unit_absorption(cells, kt, path.weight_ratio, room)
-        _interior(path, kt, stored, interior)
-        ionized, neutral = _fractions(track.state[step, 0])
+        _interior(path, kt, balance.stored, balance.interior)
+        hydrogen = path.hydrogen_cm3 * math.exp(-3.0 * middle)
+        v = track.state[step, 1]
+        here = Slow(math.exp(balance.stored[-3]), hydrogen, kt, fractions[0], fractions[1], v)
         guess = gains[0]
-        if step > 5:
+        if step > 5:  # as a cubic goes on
             guess = 4.0 * gains[0] - 6.0 * gains[1] + 4.0 * gains[2] - gains[3]
-        last_guess, last_miss, done = 0.0, 0.0, False
-        for attempt in range(most):
-            if not -neutral < guess < ionized:
-                guess = max(-0.5 * neutral, min(0.5 * ionized, guess))
-            electrons, ground = ionized - 0.5 * guess, neutral + 0.5 * guess
-            share = electrons / (1.0 + path.helium_ratio + electrons)
-            v = _matter_lag(track.state[step, 1], compton * share, D)
-            moment = Moment(
-                kt,
-                kt * math.exp(v),
-                path.packet * hubble / hydrogen,
-                hydrogen / hubble,
-                path.scattering * path.packet * kt * math.exp(v),
-                ground,
-            )
-            pairs[0], pairs[1] = hydrogen * electrons**2, v - stored[-2]
-            flow = _flow(
-                cells, path, moment, stored, pairs, room, interior, loss, source, departure
-            )
-            track.report[1] += 1.0
-            if not math.isfinite(flow):
-                return SINGULAR
-            miss = flow * D / hubble - guess
-            if abs(miss) <= tolerance * max(abs(guess), 1e-9 * min(neutral, ionized)):
-                done = True
-                break
-            if attempt:
-                slope = (miss - last_miss) / (guess - last_guess)
-            elif step == 0:
-                slope = -1.0
-            last_guess, last_miss = guess, miss
-            guess -= miss / min(slope, -1e-3)
-        if not done:
-            return NOT_CONVERGED
-        gained = advance_field(cells, moment, path.weight_ratio, departure, room, sides)
-        if step % stride == 0:
-            record = step // stride
-            for i in range(n):
-                track.source[record, i] = source[i]
-                for k in range(n):
-                    track.loss[record, i, k] = loss[i, k]
-            track.loss[record, 0, 0] -= math.exp(stored[-1])
-            track.sides[record] = sides
-        direct = math.exp(stored[-1]) * departure[0]
-        imbalance = abs(gained + direct - flow) / max(abs(flow), 1e-300)
-        track.report[2] = max(track.report[2], imbalance)
-        track.report[3] = max(track.report[3], abs(miss) / max(abs(guess), 1e-300))
+        limits = (tolerance, most)
+        attempt = _settle(cells, path, here, fractions, guess, slope, limits, room, balance)
+        if not attempt.done:
+            return NOT_CONVERGED if attempt.eliminations else SINGULAR
+        slope = attempt.slope
+        moment = _moment(path, attempt.slow)
+        gained = advance_field(cells, moment, path.weight_ratio, balance.departure, room, sides)
+        _record(step, stride, balance, sides, gained, attempt, track)
         for k in range(3, 0, -1):
             gains[k] = gains[k - 1]
-        gains[0] = guess
-        ionized, neutral = ionized - guess, neutral + guess
-        track.state[step + 1, 0] = math.log(ionized / neutral)
-        track.state[step + 1, 1] = 2.0 * v - track.state[step, 1]
-        track.report[0] = step + 1.0
+        gains[0] = attempt.gain
+        fractions = (fractions[0] - attempt.gain, fractions[1] + attempt.gain)
+        track.state[step + 1, 0] = math.log(fractions[0] / fractions[1])
+        track.state[step + 1, 1] = 2.0 * attempt.slow.lag - v
         while kept < spectrum_steps.shape[0] and spectrum_steps[kept] == step + 1:
             track.spectra[kept] = room.field
             kept += 1

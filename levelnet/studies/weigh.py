@@ -20,6 +20,7 @@ from ..background.last_scattering import ionized_redshift
 from ..background.parameters import COSMOLOGICAL, helium_mass_fraction
 from ..errors import InputError
 from ..escape.family import treatment as member
+from ..escape.resolved import ResolvedField
 from ..escape.treatment import LineTreatment
 from ..history.cost import check_memory
 from ..history.integrate import Progress
@@ -138,9 +139,9 @@ def bytes_per_target(setup: Setup) -> float:
 
 
 def _check_memory_free(chosen: LineTreatment) -> None:
-    if getattr(chosen, "sees_blue_side", False):
+    if getattr(chosen, "sees_blue_side", False) or isinstance(chosen, ResolvedField):
         raise InputError(
-            f'lines.hydrogen = "{chosen.name}": a weighing has no memory of the lines above; '
+            f'lines.hydrogen = "{chosen.name}": a weighing has no memory of the field; '
             'weigh with "sobolev"'
         )
 
