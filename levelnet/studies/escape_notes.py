@@ -35,10 +35,10 @@ def verdict_texts(study: EscapeStudy, found: EscapeVerdict) -> tuple[str, ...]:
             f"{_capital(study.variants.name[k])} errs by at most {percent(abs(one.value))} in x_e "
             f"between z = {found.low:g} and {found.high:g} (at z = {one.redshift:.0f})"
         )
-    return (*said, _enough_text(found))
+    return (*said, _enough_text(study, found))
 
 
-def _enough_text(found: EscapeVerdict) -> str:
+def _enough_text(study: EscapeStudy, found: EscapeVerdict) -> str:
     goal = f"for {percent(found.within)} in x_e at {found.low:g} <= z <= {found.high:g}: "
     own = found.candidates[-1]
     reference = f"the numerical error of the reference, {percent(own.error)} at most,"
@@ -53,8 +53,8 @@ def _enough_text(found: EscapeVerdict) -> str:
     if one.variant == own.variant:
         return f"{goal}you need {one.name}; {reference} is within"
     text = (
-        f"{goal}{one.name} is enough; it errs by {percent(one.error)} at most, at z = "
-        f"{one.redshift:.0f}, {reference} counted"
+        f"{goal}{one.name}{_switches_on(study, one.variant)} is enough; it errs by "
+        f"{percent(one.error)} at most, at z = {one.redshift:.0f}, {reference} counted"
     )
     if found.relapse is not None:
         more = found.candidates[found.relapse]
@@ -63,6 +63,15 @@ def _enough_text(found: EscapeVerdict) -> str:
             f"{percent(more.error)}"
         )
     return text
+
+
+def _switches_on(study: EscapeStudy, variant: int) -> str:
+    """The switches of a field in brackets, where neither none nor all are on."""
+    if variant in study.treatments:
+        return ""
+    on = study.variants.switched_on[variant]
+    names = [name for name, one in zip(study.switches.name, on.tolist(), strict=True) if one]
+    return f" ({', '.join(names)})" if 0 < len(names) < len(on) else ""
 
 
 def demands_text(found: EscapeDemands) -> str:

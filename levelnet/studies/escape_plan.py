@@ -107,11 +107,13 @@ def escape_plan(setup: Setup, order: Iterable[str] | None = None) -> Plan:
 
     base = having((), "transfer without switches")
     reference = having(switches, "transfer with every switch")
-    sets = [switches[: k + 1] for k in range(len(switches))]
-    cumulative = tuple(having(one, f"transfer with {', '.join(one)}") for one in sets)
-    alone = tuple(having(_with_needs(one), f"transfer with {one} alone") for one in switches)
+    alone = tuple(having(_with_needs(one), _alone_name(one)) for one in switches)
     removed = tuple(
         having(set(switches) - _with_needing(one), f"transfer without {one}") for one in switches
+    )
+    cumulative = tuple(
+        having(switches[:count], f"transfer with the first {count} switches")
+        for count in range(1, len(switches) + 1)
     )
     whole = found[reference]
     coarser = Variant(f"{whole.name}, cells twice as wide", _coarser(variant_setup(setup, whole)))
@@ -185,6 +187,13 @@ def _checked(order: tuple[str, ...]) -> tuple[str, ...]:
         if order.index(name) < order.index(needed):
             raise InputError(f"order = {text}: {name} comes with {needed}, so after it")
     return order
+
+
+def _alone_name(switch: str) -> str:
+    needed = _NEEDS.get(switch)
+    return (
+        f"transfer with {switch} alone" if needed is None else f"transfer with {needed}, {switch}"
+    )
 
 
 def _with_needs(switch: str) -> set[str]:
