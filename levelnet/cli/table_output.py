@@ -123,6 +123,7 @@ def distilled_values(history: FastHistory, setup: Setup | None) -> dict[str, Any
         "start_redshift": history.start_redshift,
         "n_steps": history.n_steps,
         "n_rejected": history.n_rejected,
+        "frequency_error": history.frequency_error,
         "observables": None
         if seen is None
         else {
@@ -168,12 +169,8 @@ def distilled_summary(history: FastHistory) -> str:
     steps = (
         f"{history.n_steps} steps ({history.n_rejected} rejected), from Saha equilibrium at z = "
     )
-    return "\n".join(
-        [
-            *lines,
-            "",
-            *aligned([head, *body], right=True),
-            "",
-            row("integration", f"{steps}{history.start_redshift:.2f}"),
-        ]
-    )
+    how = [row("integration", f"{steps}{history.start_redshift:.2f}")]
+    if history.field is not None:
+        error = f"{history.frequency_error:.1e} in x_e from the frequency step"
+        how.append(row("field", f"{len(history.field.redshift)} spectra; {error}"))
+    return "\n".join([*lines, "", *aligned([head, *body], right=True), "", *how])

@@ -5,7 +5,7 @@ from __future__ import annotations
 import math
 
 COLDEST_FIELD_K = 55.0
-"""T_r below which factors of soft photons leave the doubles."""
+"""T_r below which factors of soft photons leave the doubles; changed constants scale it."""
 
 # Error of x_e over the square of the step, all processes on. It only chooses the step: the error is
 # measured in every run.

@@ -16,6 +16,9 @@ _SECONDS_PER_BLOCK = 6e-5
 _SECONDS_PER_EVALUATION = 2.5e-4
 _SECONDS_PER_BORDER_LINE = 1e-8
 _EVALUATIONS = 4000
+# One cell of a resolved field in one step, with the coarser run that tells the error.
+_SECONDS_PER_CELL = 5e-8
+_FIELD_START = 1900.0  # about where a field is first resolved, 1 + z
 HIGHEST_N = 1000
 _RESERVE_BYTES = 3e8
 # Arrays over shells and resolved levels alive at once: strengths, rates, response, work space.
@@ -59,7 +62,17 @@ def estimate(setup: Setup) -> Cost:
     node = 7.0 / 12.0 * top**4 / _FLOP_PER_S + 3.0 * top**3 / 1e9 + _SECONDS_PER_BLOCK * top
     node += _border_seconds(top, n - top)
     evaluation = _SECONDS_PER_EVALUATION if setup.accuracy.interpolate else 5.0 * node
-    return Cost(memory, (nodes + n_out) * node + _EVALUATIONS * evaluation + 1e-8 * n**3)
+    seconds = (nodes + n_out) * node + _EVALUATIONS * evaluation + 1e-8 * n**3
+    return Cost(memory, seconds + _field_seconds(setup))
+
+
+def _field_seconds(setup: Setup) -> float:
+    """Time of a resolved field: every cell at every step of time, both as wide in the logarithm."""
+    if setup.lines.transfer is None:
+        return 0.0
+    cells = math.log(8.0 / 3.0) / setup.frequency_step
+    steps = math.log(_FIELD_START / (1.0 + setup.grid.redshift_end)) / setup.frequency_step
+    return _SECONDS_PER_CELL * cells * max(steps, 0.0)
 
 
 def _border_seconds(top: int, n_shells: int) -> float:

@@ -37,6 +37,9 @@ _LOCAL = 0.5
 # A march with a field, which takes equal steps, starts where the lag is so small; the reference
 # that tells it T_m is integrated to this accuracy.
 _FIELD_LAG, _REFERENCE = 1e-5, 1e-5
+# It goes at least so far in ln a, wherever the outputs lie, and samples the interior so far beyond
+# its end: more than a few of the widest steps.
+_SHORTEST_MARCH, _BEYOND = 0.1, 0.05
 # Size of the atom that finds the hand-over: it depends on the lowest levels only.
 _SCOUT_N = 6
 
@@ -95,8 +98,10 @@ def integrate_history(
     factor = scales(setup.physics)
     reduced: Reduced = live_reduction(ladder)
     if setup.accuracy.interpolate:
-        highest = max(redshift[0], handover.redshift, start_above)
-        span = min(redshift[-1], handover.redshift), highest
+        low, high = redshift[-1], max(redshift[0], handover.redshift, start_above)
+        if resolved:
+            low = _later(_march_redshifts(handover, redshift)[-1], _BEYOND)
+        span = min(low, handover.redshift), high
         reduced = _table(setup, ladder, span, tell, pieces)
     equations = slow_equations(setup, with_scales(reduced, factor), chosen)
     if resolved:
@@ -142,11 +147,23 @@ def march_field(
     """
     accuracy = replace(setup.accuracy, relative=max(setup.accuracy.relative, _REFERENCE))
     rough = replace(setup, accuracy=accuracy)
+    redshift = _march_redshifts(handover, redshift)
     reference = integrate_slow(rough, equations, handover, redshift, lambda *_: None)
     tell("radiation field", 0.0)
     run = resolve_field(setup, equations, reference, redshift)
     tell("radiation field", 1.0)
     return run
+
+
+def _march_redshifts(handover: Handover, redshift: FloatArray) -> FloatArray:
+    """Output redshifts, and one more where they would leave a march too short."""
+    least = _later(handover.redshift, _SHORTEST_MARCH)
+    return redshift if redshift[-1] <= least else np.append(redshift, least)
+
+
+def _later(redshift: float, log_growth: float) -> float:
+    """Redshift when the universe has grown by a factor exp(log_growth)."""
+    return math.expm1(math.log1p(redshift) - log_growth)
 
 
 def slow_equations(

@@ -12,7 +12,7 @@ from typing import Annotated, Any
 from pydantic import Field
 
 from ..atomic.overrides import Rates
-from ..atomic.physics import Physics
+from ..atomic.physics import Physics, scales
 from ..atomic.selection import AtomSize
 from ..atomic.species import Helium, Hydrogen
 from ..background.cosmology import Cosmology
@@ -177,17 +177,19 @@ class Setup:
                 f"lines.transfer.frequency_step = {step:g}: too coarse for accuracy.relative = "
                 f"{self.accuracy.relative:g}, which allows up to {limit:.2g}"
             )
-        most = highest_line(fitted_step(step)) - 1
+        # Also on the grid twice as coarse that tells the error.
+        most = highest_line(fitted_step(2.0 * step)) - 1
         if self.atom_size.lyman_lines > most:
             raise ValueError(
-                f"lines.transfer.frequency_step = {step:g}: tells {most} Lyman lines apart, and "
-                f"lines.lyman_lines = {self.atom_size.lyman_lines}"
+                f"lines.transfer.frequency_step = {step:g}: twice this step tells {most} Lyman "
+                f"lines apart, and lines.lyman_lines = {self.atom_size.lyman_lines}"
             )
-        lowest = COLDEST_FIELD_K / self.cosmology.cmb_temperature_k - 1.0
+        coldest_k = COLDEST_FIELD_K * scales(self.physics).energy
+        lowest = coldest_k / self.cosmology.cmb_temperature_k - 1.0
         if self.grid.redshift_end < lowest:
             raise ValueError(
                 f"grid.redshift_end = {self.grid.redshift_end:g}: the field is resolved down to "
-                f"redshift {lowest:.4g} (T_r = {COLDEST_FIELD_K:g} K)"
+                f"redshift {lowest:.4g} (T_r = {coldest_k:.4g} K)"
             )
 
     def _check_overrides_act(self) -> None:

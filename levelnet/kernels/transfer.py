@@ -30,6 +30,8 @@ IntArray = NDArray[np.int64]
 DONE, SINGULAR, NOT_CONVERGED = 0, 1, 2
 # Exchange with the neighbours in one step above which the mean of a cell leans to its end.
 STIFF = 30.0
+# tau of a cell above which its mean is not taken from a series.
+THICK = 0.02
 
 
 class Cells(NamedTuple):
@@ -180,18 +182,22 @@ def _depths(cells: Cells, moment: Moment, room: Room) -> None:
         unit = room.unit[i]
         for j in range(n_cells):
             total[j] += moment.ground * unit[j]
+    # Thin cells first, without a branch, so that the loop is compiled to vectors.
     for j in range(n_cells):
-        packet = moment.packet_per_s * cells.growth[j]
-        tau = total[j] / packet
-        if tau < 0.02:
-            rest = 0.5 - tau * (1.0 / 6.0 - tau * (1.0 / 24.0 - tau * (1.0 / 120.0)))
-            mean, kept_back = 1.0 - tau * rest, rest / packet
-        else:
-            mean = -math.expm1(-tau) / tau
-            kept_back = (1.0 - mean) / total[j]
+        per_packet = 1.0 / (moment.packet_per_s * cells.growth[j])
+        tau = total[j] * per_packet
+        rest = 0.5 - tau * (1.0 / 6.0 - tau * (1.0 / 24.0 - tau * (1.0 / 120.0)))
+        mean = 1.0 - tau * rest
         room.mean[j] = mean * room.boltzmann[j]
-        room.kept_back[j] = kept_back * room.boltzmann[j]
+        room.kept_back[j] = rest * per_packet * room.boltzmann[j]
         room.lit[j] = mean * room.field[j]
+    for j in range(n_cells):
+        if total[j] >= THICK * moment.packet_per_s * cells.growth[j]:
+            tau = total[j] / (moment.packet_per_s * cells.growth[j])
+            mean = -math.expm1(-tau) / tau
+            room.mean[j] = mean * room.boltzmann[j]
+            room.kept_back[j] = (1.0 - mean) / total[j] * room.boltzmann[j]
+            room.lit[j] = mean * room.field[j]
     first = cells.first_scattering
     for j in range(first, first + room.theta.shape[0]):
         room.mean[j] = room.kept_back[j] = room.lit[j] = 0.0
@@ -207,17 +213,18 @@ def _couple_far(
         unit, scaled = room.unit[i], room.scaled[i]
         for j in range(n_cells):
             scaled[j] = unit[j] * room.kept_back[j]
-    exchange = np.dot(room.unit, room.scaled.T)
     leak, lit = np.dot(room.unit, room.mean), np.dot(room.unit, room.lit)
     for i in range(n_levels):
         own = cells.level[i]
         loss[own, own] += ground * leak[i] * share[i]
         source[own] += ground * lit[i]
-        for k in range(n_levels):
-            if k != i:
-                joined = ground * ground * exchange[i, k]
-                loss[own, own] += joined * share[i]
-                loss[own, cells.level[k]] -= joined * share[k]
+        for k in range(i):
+            other = cells.level[k]
+            joined = ground * ground * np.dot(room.unit[i], room.scaled[k])
+            loss[own, own] += joined * share[i]
+            loss[own, other] -= joined * share[k]
+            loss[other, other] += joined * share[k]
+            loss[other, own] -= joined * share[i]
 
 
 @kernel
@@ -385,12 +392,15 @@ def advance_field(
         d[i] = departure[cells.level[i]] / (weight_ratio[cells.level[i]] * own)
     out = room.scaled[0] if n_levels else np.empty(n_cells)
     for j in range(n_cells):
-        # First times the mean, as in K: far below the line in a cold field it is as large as the
-        # rest is small.
-        gain = -room.absorption[j] * room.lit[j]
-        for i in range(n_levels):
-            gain += room.unit[i, j] * room.mean[j] * d[i]
-        out[j] = room.field[j] + gain / (moment.packet_per_s * cells.growth[j])
+        out[j] = -room.absorption[j] * room.lit[j]
+    for i in range(n_levels):
+        unit = room.unit[i]
+        for j in range(n_cells):
+            # First times the mean, as in K: far below the line in a cold field it is as large as
+            # the rest is small.
+            out[j] += unit[j] * room.mean[j] * d[i]
+    for j in range(n_cells):
+        out[j] = room.field[j] + out[j] / (moment.packet_per_s * cells.growth[j])
     first, n = cells.first_scattering, room.theta.shape[0]
     core = departure[cells.line_upper[0]] / (moment.ground * weight_ratio[cells.line_upper[0]])
     for k in range(n):

@@ -165,10 +165,11 @@ def distilled_of(content: Content) -> FastHistory:
     from ..distilled.observables import Observables
 
     parts = all_fields(content, DISTILLED_LAYOUT)
-    seen = parts.pop("observables", None)
+    seen, field = parts.pop("observables", None), parts.pop("field", None)
     return FastHistory(
         outcome=outcome_of(content),
         observables=None if seen is None else Observables(**seen),
+        field=None if field is None else RadiationField(**field),
         **parts,
     )
 

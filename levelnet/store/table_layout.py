@@ -169,6 +169,7 @@ RUN = Group(
         _number("start_redshift", "1", "redshift where Saha equilibrium is left"),
         _number("n_steps", "1", "steps of the integration", "int64"),
         _number("n_rejected", "1", "rejected steps of the integration", "int64"),
+        _number("frequency_error", "1", "relative error of x_e from the frequency step; 0: none"),
     ),
 )
 
@@ -193,7 +194,7 @@ DISTILLED_LAYOUT = Layout(
     "a distilled history",
     layout.ROOT_ATTRIBUTES,
     (DISTILLED, RUN),
-    (OBSERVABLES,),
+    (OBSERVABLES, layout.FIELD),
 )
 
 

@@ -115,10 +115,8 @@ def run_plan(
     costs = [_FIELD_COST if one.setup.lines.transfer else 1.0 for one in jobs]
     with _shared(pieces, executor) as kept:
         task = partial(compute_variant, pieces=kept, optical_depth_to=optical_depth_to)
-        # The first fills the pieces: processes that start together would all reduce the network.
-        sharing = [k for k, one in enumerate(jobs) if one.keeps == reference.keeps]
-        first = min(sharing, key=lambda k: costs[k])
-        done = {first: task(jobs[first])}
+        # The base fills the pieces: processes that start together would all reduce the network.
+        done = {plan.base: task(jobs[plan.base])}
         left = [k for k in range(len(jobs)) if k not in done]
         found = run_jobs(
             [jobs[k] for k in left], [costs[k] for k in left], task, executor, progress, "variants"
