@@ -89,7 +89,7 @@ def test_coarser_run_is_the_error_of_the_reference() -> None:
 def test_failure_names_the_variant() -> None:
     setup = small_setup(5, 600.0, 6, lines={"lyman_lines": 2})
     setup = dataclasses.replace(setup, accuracy=Accuracy(max_steps=10))
-    with pytest.raises(SolveError, match="closed: the step limit was reached"):
+    with pytest.raises(SolveError, match="Sobolev: the step limit was reached"):
         run_plan(setup, cheap_plan(setup))
 
 

@@ -25,6 +25,8 @@ SMALL = (
     + '[lines]\nhydrogen = "transfer"\nlyman_lines = 3\n[lines.transfer]\nfrequency_step = 1e-3\n'
 )
 
+FIELD = '[lines]\nhydrogen = "transfer"\n[lines.transfer]\nfrequency_step = {}\n'
+
 
 @pytest.fixture
 def folder(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Path:
@@ -98,7 +100,7 @@ def test_study_from_setup_to_verdict(folder: Path, capsys: pytest.CaptureFixture
         (("", ""), ["--requirement", "none.toml"], "none.toml: cannot be read"),
         (("", ""), ["--order", "raman"], "order = raman: each switch once is needed"),
         (("", ""), ["--order", "raman,magic"], '"magic" is no switch; they are stimulated'),
-        (("n_max = 6", "n_max = 3"), [], "hydrogen.n_max = 3"),
+        (("lyman_lines = 3", "lyman_lines = 6"), [], "hydrogen.n_max = 6 has only 5 Lyman lines"),
         (("lyman_lines = 3", "lyman_lines = 9"), [], "lines.lyman_lines = 9"),
         (("lyman_lines = 3", 'lyman_lines = "none"'), [], "lyman_lines"),
     ],
@@ -119,3 +121,32 @@ def test_complaints_are_one_line(
     assert message in said.err
     assert [path.name for path in folder.iterdir()] == ["good.toml"]
     assert time.monotonic() - start < 5.0
+
+
+# The setup names no field, so that it is the study that asks for one.
+PLAIN = GOOD.replace("n_max = 4", "n_max = 8")
+
+
+@pytest.mark.parametrize(
+    ("changed", "message"),
+    [
+        (("n_max = 8", "n_max = 3"), "lines.transfer: needs levels up to n = 4"),
+        (("end = 200.0", "end = 10.0"), "grid.redshift_end = 10: the field is resolved down to"),
+        (
+            ("[grid]", "[accuracy]\nrelative = 1e-9\n" + FIELD.format(1.5e-4) + "[grid]"),
+            "cells twice as wide: lines.transfer.frequency_step = 0.0003: too coarse",
+        ),
+    ],
+)
+def test_setup_that_does_not_go_with_the_reference(
+    folder: Path, capsys: pytest.CaptureFixture[str], changed: tuple[str, str], message: str
+) -> None:
+    assert changed[0] in PLAIN
+    (folder / "good.toml").write_text(PLAIN.replace(*changed))
+    assert main(["escape", "good.toml"]) == 2
+    said = capsys.readouterr()
+    assert said.out == ""
+    assert len(said.err.splitlines()) == 1
+    assert "error: transfer with every switch" in said.err
+    assert message in said.err
+    assert [path.name for path in folder.iterdir()] == ["good.toml"]
