@@ -32,8 +32,11 @@ from ..escape.treatment import LineTreatment, ResonanceLines
 from ..escape.two_photon import with_two_photon
 from ..network.coupling import GroundCoupling, with_line_factors
 from ..network.gradient import FlowGradient, FlowSlopes, flow_slopes, net_flow_gradient
-from ..network.reduced import Reduced, ReducedRates
-from ..network.solve import KeptSolution, solve_kept
+from ..network.reduced import Reduced
+from ..network.solve import solve_kept
+from .helium import Around, HeliumEquations
+from .helium import Rates as HeliumRates
+from .local import Local
 
 
 class Background(NamedTuple):
@@ -57,15 +60,6 @@ class Background(NamedTuple):
     hubble_slope: float
 
 
-class Local(NamedTuple):
-    """Everything computed at one time and state."""
-
-    conditions: Conditions
-    rates: ReducedRates
-    coupling: GroundCoupling
-    solution: KeptSolution
-
-
 class Linearized(NamedTuple):
     """The equations at one time and state, to first order.
 
@@ -73,11 +67,11 @@ class Linearized(NamedTuple):
     ----------
     local : Local
         Everything there.
-    rate : ndarray, shape (2,)
-        (du/ds, dv/ds).
-    matrix : ndarray, shape (2, 2)
+    rate : ndarray, shape (n,)
+        (du/ds, dv/ds), with helium (da/ds, db/ds) too.
+    matrix : ndarray, shape (n, n)
         Derivatives of the rates by the state.
-    drift : ndarray, shape (2,)
+    drift : ndarray, shape (n,)
         By s.
     gradient : FlowGradient
         Of the net flow to the ground state by the rates.
@@ -127,6 +121,8 @@ class SlowEquations:
         Overrides of the escape of each line; None: none.
     past : Past or None
         What the run remembers of the lines' red sides, where the treatment sees blue sides.
+    helium : HeliumEquations or None
+        Where helium recombines too; None: it is neutral and inert.
     """
 
     cosmology: Cosmology
@@ -138,6 +134,7 @@ class SlowEquations:
     scales: Scales = UNCHANGED
     escape_factor: FloatArray | None = None
     past: Past | None = None
+    helium: HeliumEquations | None = None
 
     def decay_rate_per_s(self, radiation_temperature_k: float) -> float:
         """2s-1s rate, stimulated by the blackbody if the setup says so."""
@@ -166,7 +163,7 @@ class SlowEquations:
             around.radiation_temperature_k * math.exp(state[1]),
             around.hydrogen_density_cm3,
             around.hubble_rate_per_s,
-            ionized,
+            self.electron_fraction(state),
             ionized,
             neutral,
         )
@@ -182,6 +179,13 @@ class SlowEquations:
             self.two_photon_mode,
         )
         return Local(conditions, rates, coupling, solve_kept(kept, rates, coupling, conditions))
+
+    def electron_fraction(self, state: FloatArray) -> float:
+        """n_e/n_H (dimensionless) of a state."""
+        ionized, _ = ionized_and_neutral(float(state[0]))
+        if self.helium is None:
+            return ionized
+        return ionized + self.cosmology.helium_ratio() * self.helium.fractions(state[2:]).electrons
 
     def _blue_side(self, log_scale: float, around: Background) -> BlueSide | None:
         return None if self.past is None else self.past.blue_side(log_scale, around.hubble_slope)
@@ -214,8 +218,12 @@ class SlowEquations:
         return with_line_factors(coupling, self.lines.upper, self.escape_factor)
 
     def rate(self, log_scale: float, state: FloatArray) -> FloatArray:
-        """(du/ds, dv/ds)."""
-        return self._rate_of(self.local(log_scale, state), state)
+        """(du/ds, dv/ds), with helium (da/ds, db/ds) too."""
+        here = self.local(log_scale, state)
+        rate = self._rate_of(here, state)
+        if self.helium is None:
+            return rate
+        return np.append(rate, self._helium_rates(log_scale, here, state).rate)
 
     def _rate_of(self, here: Local, state: FloatArray) -> FloatArray:
         c = here.conditions
@@ -227,8 +235,21 @@ class SlowEquations:
             ]
         )
 
+    def _helium_rates(self, log_scale: float, here: Local, state: FloatArray) -> HeliumRates:
+        assert self.helium is not None
+        c, ratio = here.conditions, self.cosmology.helium_ratio()
+        around = Around(
+            c.radiation_temperature_k,
+            c.matter_temperature_k,
+            ratio * c.hydrogen_density_cm3,
+            c.hubble_rate_per_s,
+            c.electron_fraction / ratio,
+            self.background(log_scale).hubble_slope,
+        )
+        return self.helium.rates(around, state[2:])
+
     def jacobian(self, log_scale: float, state: FloatArray) -> tuple[FloatArray, FloatArray]:
-        """Derivatives of the rates by the state, shape (2, 2), and by s, shape (2,)."""
+        """Derivatives of the rates by the state, shape (n, n), and by s, shape (n,)."""
         here = self.linearized(log_scale, state)
         return here.matrix, here.drift
 
@@ -247,23 +268,50 @@ class SlowEquations:
             by_time += float(gradient.excess @ here.coupling.excess_by_time)
         compton = self._compton_per_hubble(c)
         cooling = compton * math.expm1(-state[1])
+        # Rows of u and v: by ln n_e, and by u and v with n_e held.
         helium = self.cosmology.helium_ratio()
-        by_electrons = (1.0 + helium) / (1.0 + helium + c.electron_fraction)
-        matrix = np.array(
+        share = (1.0 + helium) / (1.0 + helium + c.electron_fraction)
+        by_electrons = np.array([scale * slopes.ln_electron_fraction, cooling * share])
+        own = np.array(
             [
                 [scale * by_odds, scale * slopes.ln_matter_temperature],
-                [cooling * by_electrons * c.ground_fraction, -compton * math.exp(-state[1])],
+                [0.0, -compton * math.exp(-state[1])],
             ]
         )
         drift = np.array([scale * by_time, cooling * (-4.0 - hubble_slope)])
-        return Linearized(here, self._rate_of(here, state), matrix, drift, gradient, slopes)
+        rate = self._rate_of(here, state)
+        electrons = self._electrons_by(c, state)
+        if self.helium is None:
+            matrix = own + np.outer(by_electrons, electrons)
+            return Linearized(here, rate, matrix, drift, gradient, slopes)
+        found = self._helium_rates(log_scale, here, state)
+        matrix = np.zeros((4, 4))
+        matrix[:2, :2], matrix[2:, 2:] = own, found.by_own
+        matrix[2:, 1] = found.by_matter
+        matrix += np.outer(np.append(by_electrons, found.by_electrons), electrons)
+        return Linearized(
+            here,
+            np.append(rate, found.rate),
+            matrix,
+            np.append(drift, found.by_time),
+            gradient,
+            slopes,
+        )
+
+    def _electrons_by(self, c: Conditions, state: FloatArray) -> FloatArray:
+        """Derivatives of ln n_e by the state."""
+        hydrogen = c.ionized_fraction * c.ground_fraction / c.electron_fraction
+        if self.helium is None:
+            return np.array([hydrogen, 0.0])
+        share = self.cosmology.helium_ratio() / c.electron_fraction
+        helium = share * self.helium.fractions(state[2:]).electrons_by
+        return np.array([hydrogen, 0.0, *helium])
 
     def _flow_derivatives(
         self, slopes: FlowSlopes, c: Conditions, flow: float, hubble_slope: float
     ) -> tuple[float, float]:
         """Derivatives of F, less what the prefactor 1/(H x_HII x_HI) takes, by u and by s."""
-        ionized = slopes.ln_electron_fraction + slopes.ln_ionized_fraction
-        by_odds = c.ground_fraction * (ionized - flow) - c.ionized_fraction * (
+        by_odds = c.ground_fraction * (slopes.ln_ionized_fraction - flow) - c.ionized_fraction * (
             slopes.ln_ground_fraction - flow
         )
         by_time = (

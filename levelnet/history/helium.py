@@ -1,0 +1,301 @@
+"""Helium among the slow variables: its two ionizations, their rates of change and derivatives.
+
+The variables are a = ln[(x_HeII + x_HeIII)/x_HeI] and b = ln(x_HeIII/x_HeII), so that every fraction
+follows to full relative precision. With F_1 and F_2 the net recombinations to HeI and to HeII per
+helium nucleus and second, and y = 1 - x_HeI,
+
+    da/ds = -F_1/(H x_HeI y),
+    db/ds = -[F_2 (1/x_HeIII + 1/x_HeII) - F_1/x_HeII]/H.
+
+Where the second ionization is in Saha equilibrium, b is pulled to its value there so fast that it
+stays within 1e-8 of it.
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+from typing import NamedTuple
+
+import numpy as np
+
+from .. import constants as const
+from ..arrays import FloatArray
+from ..atomic.detailed_balance import log_saha_factor
+from ..background.conditions import Conditions
+from ..escape.treatment import LineTreatment, ResonanceLines
+from ..network.coupling import GroundCoupling, with_decay
+from ..network.gradient import flow_slopes, net_flow_gradient
+from ..network.reduced import Reduced
+from ..network.solve import log_boltzmann_populations, solve_kept
+from .local import Local
+
+# Pull to Saha equilibrium in Hubble rates, and x_HeIII/x_HeII (its ln) below which it replaces the
+# network: nothing of it is left to see.
+_PULL, _GONE = 1e9, -40.0
+ION_WEIGHT = 2.0  # of He+ in its ground state
+
+
+class Around(NamedTuple):
+    """What helium needs to know of its surroundings.
+
+    Attributes
+    ----------
+    radiation_temperature_k, matter_temperature_k : float, K
+        T_r and T_m.
+    helium_density_cm3, hubble_rate_per_s : float
+        n_He and H.
+    electrons_per_helium : float
+        n_e/n_He.
+    hubble_slope : float
+        d ln H/d ln a.
+    """
+
+    radiation_temperature_k: float
+    matter_temperature_k: float
+    helium_density_cm3: float
+    hubble_rate_per_s: float
+    electrons_per_helium: float
+    hubble_slope: float
+
+
+class HeliumFractions(NamedTuple):
+    """Of helium nuclei, each to full relative precision, and what they are made of.
+
+    Attributes
+    ----------
+    neutral, single, double : float
+        x_HeI, x_HeII, x_HeIII.
+    charged : float
+        y.
+    double_share : float
+        x_HeIII/y.
+    """
+
+    neutral: float
+    single: float
+    double: float
+    charged: float
+    double_share: float
+
+    @property
+    def electrons(self) -> float:
+        """Electrons per helium nucleus."""
+        return self.single + 2.0 * self.double
+
+    @property
+    def electrons_by(self) -> FloatArray:
+        """Derivatives of `electrons` by a and b."""
+        mixed = self.single * self.double / self.charged
+        return np.array([self.neutral * self.electrons, mixed])
+
+
+class Flow(NamedTuple):
+    """Net recombinations per nucleus and second, with their derivatives.
+
+    Attributes
+    ----------
+    value : float, s^-1
+        F.
+    by_electrons, by_ion, by_ground, by_matter : float, s^-1
+        By ln of n_e, of both fractions, and of T_m.
+    by_time : float, s^-1
+        By ln a with the state held, less F d ln H/d ln a, which the prefactor 1/H takes.
+    """
+
+    value: float
+    by_electrons: float
+    by_ion: float
+    by_ground: float
+    by_matter: float
+    by_time: float
+
+
+class Rates(NamedTuple):
+    """(da/ds, db/ds) and their derivatives; shapes (2,), (2, 2), (2,), (2,), (2,).
+
+    Attributes
+    ----------
+    rate : ndarray
+        The rates.
+    by_own : ndarray
+        By a and b, with n_e held.
+    by_electrons, by_matter, by_time : ndarray
+        By ln n_e, by v, by ln a.
+    """
+
+    rate: FloatArray
+    by_own: FloatArray
+    by_electrons: FloatArray
+    by_matter: FloatArray
+    by_time: FloatArray
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class IonNetwork:
+    """The levels of one ion stage and how they reach its ground state.
+
+    Attributes
+    ----------
+    reduced : Reduced
+        Its interior.
+    lines : ResonanceLines
+        Lines to the ground state.
+    treatment : LineTreatment
+        How their photons escape.
+    decay : int
+        Position of the kept level that decays by two photons.
+    decay_rate_per_s : float, s^-1
+        Its rate.
+    """
+
+    reduced: Reduced
+    lines: ResonanceLines
+    treatment: LineTreatment
+    decay: int
+    decay_rate_per_s: float
+
+    def solve(self, conditions: Conditions) -> Local:
+        """Kept levels at these conditions; densities and fractions are those of the element."""
+        kept = self.reduced.kept
+        rates = self.reduced.rates(
+            conditions.radiation_temperature_k, conditions.matter_temperature_k
+        )
+        coupling = self._coupling(conditions)
+        return Local(conditions, rates, coupling, solve_kept(kept, rates, coupling, conditions))
+
+    def _coupling(self, conditions: Conditions) -> GroundCoupling:
+        kept = self.reduced.kept
+        lines = self.treatment.couple(self.lines, kept, conditions)
+        log_boltzmann = log_boltzmann_populations(
+            kept, conditions.radiation_temperature_k, conditions.ground_fraction
+        )
+        here = math.exp(float(log_boltzmann[self.decay]))
+        return with_decay(lines, self.decay, self.decay_rate_per_s, 0.0, here)
+
+    def flow(self, around: Around, ion: float, ground: float) -> Flow:
+        """Net recombinations and their derivatives."""
+        conditions = Conditions(
+            around.radiation_temperature_k,
+            around.matter_temperature_k,
+            around.helium_density_cm3,
+            around.hubble_rate_per_s,
+            around.electrons_per_helium,
+            ion,
+            ground,
+        )
+        here = self.solve(conditions)
+        gradient = net_flow_gradient(here.rates, here.coupling, here.solution)
+        slopes = flow_slopes(self.reduced.kept, here.rates, here.coupling, conditions, gradient)
+        value = here.solution.net_flow
+        by_time = (
+            -slopes.ln_radiation_temperature
+            - slopes.ln_matter_temperature
+            - 3.0 * slopes.ln_hydrogen_density
+            + around.hubble_slope * (slopes.ln_hubble_rate - value)
+        )
+        return Flow(
+            value,
+            slopes.ln_electron_fraction,
+            slopes.ln_ionized_fraction,
+            slopes.ln_ground_fraction,
+            slopes.ln_matter_temperature,
+            by_time,
+        )
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class HeliumEquations:
+    """The two ionizations of helium.
+
+    Attributes
+    ----------
+    first : IonNetwork
+        He I.
+    second : IonNetwork or None
+        He II; None: Saha equilibrium.
+    ionization_ev : tuple of float, eV
+        Of He I and of He II, each from its ground state.
+    """
+
+    first: IonNetwork
+    second: IonNetwork | None
+    ionization_ev: tuple[float, float]
+
+    @staticmethod
+    def fractions(state: FloatArray) -> HeliumFractions:
+        """Fractions at (a, b)."""
+        charged, neutral = _split(float(state[0]))
+        double_share, single_share = _split(float(state[1]))
+        return HeliumFractions(
+            neutral, charged * single_share, charged * double_share, charged, double_share
+        )
+
+    def rates(self, around: Around, state: FloatArray) -> Rates:
+        """Rates of change and derivatives at (a, b)."""
+        x = self.fractions(state)
+        first = self.first.flow(around, x.single, x.neutral)
+        lowest = self._first_rates(around, x, first)
+        if self.second is None or state[1] < _GONE:
+            return _stacked(lowest, self._saha_rates(around, float(state[1])))
+        second = self.second.flow(around, x.double, x.single)
+        return _stacked(lowest, _second_rates(around, x, first, second))
+
+    @staticmethod
+    def _first_rates(around: Around, x: HeliumFractions, flow: Flow) -> list[float]:
+        scale = -1.0 / (around.hubble_rate_per_s * x.neutral * x.charged)
+        by_a = flow.by_ion * x.neutral - flow.by_ground * x.charged
+        by_a -= flow.value * (x.neutral - x.charged)
+        by_b = -flow.by_ion * x.double_share
+        terms = (flow.value, by_a, by_b, flow.by_electrons, flow.by_matter, flow.by_time)
+        return [scale * one for one in terms]
+
+    def _saha_rates(self, around: Around, b: float) -> list[float]:
+        matter_k = around.matter_temperature_k
+        slope = -1.5 - self.ionization_ev[1] / (const.BOLTZMANN_EV_K * matter_k)
+        pulled = self.saha_log_ratio(1, around) - b
+        # Value, by a, by b, by ln n_e, by v, by ln a (T falls, n_e falls as a^-3).
+        terms = (pulled, 0.0, -1.0, -1.0, -slope, slope + 3.0)
+        return [_PULL * one for one in terms]
+
+    def saha_log_ratio(self, stage: int, around: Around) -> float:
+        """Ln of the ratio of an ion to the stage below (0: He II/He I) in Saha equilibrium at T_m."""
+        electrons_cm3 = around.electrons_per_helium * around.helium_density_cm3
+        # Ground state over ion: 1 over 2 for He I, 2 over 1 for He II, all over the electron's 2.
+        weight = (1.0 / ION_WEIGHT, 2.0)[stage]
+        log_factor = log_saha_factor(
+            weight, self.ionization_ev[stage], around.matter_temperature_k, charge=2
+        )
+        return -float(log_factor) - math.log(electrons_cm3)
+
+
+def _second_rates(around: Around, x: HeliumFractions, first: Flow, second: Flow) -> list[float]:
+    q, inverse = x.double_share, 1.0 / x.double + 1.0 / x.single
+    lost, fed = second.value * inverse, first.value / x.single
+    by_a = (second.by_ion + second.by_ground - second.value) * x.neutral * inverse
+    by_a -= (first.by_ion * x.neutral - first.by_ground * x.charged) / x.single - x.neutral * fed
+    by_b = (second.by_ion * (1.0 - q) - second.by_ground * q) * inverse
+    by_b += second.value * (q / x.single - (1.0 - q) / x.double)
+    by_b -= q * (fed - first.by_ion / x.single)
+    terms = (
+        lost - fed,
+        by_a,
+        by_b,
+        second.by_electrons * inverse - first.by_electrons / x.single,
+        second.by_matter * inverse - first.by_matter / x.single,
+        second.by_time * inverse - first.by_time / x.single,
+    )
+    return [-one / around.hubble_rate_per_s for one in terms]
+
+
+def _stacked(first: list[float], second: list[float]) -> Rates:
+    rows = np.array([first, second])
+    return Rates(rows[:, 0], rows[:, 1:3], rows[:, 3], rows[:, 4], rows[:, 5])
+
+
+def _split(log_odds: float) -> tuple[float, float]:
+    """Both parts of a whole from the ln of their ratio, the first the one above."""
+    small = math.exp(-abs(log_odds))
+    large = 1.0 / (1.0 + small)
+    small *= large
+    return (large, small) if log_odds > 0.0 else (small, large)
