@@ -166,19 +166,42 @@ def helium_recombination_cm3_per_s(
             f"allowed are {COLDEST_K:g} to {HOTTEST_K:g} K"
         )
     levels, grid = atom.levels, atom.grid
+    captured = captured_spectrum(atom, radiation_temperature_k)
+    thermal_ev = const.BOLTZMANN_EV_K * matter_temperature_k
+    with np.errstate(under="ignore"):
+        total = captured @ np.exp(-grid.energy * levels.chi_ev / thermal_ev)
+    volume = thermal_volume_cm3(matter_temperature_k, levels.nuclear_charge)
+    coefficients: FloatArray = volume * total
+    return coefficients
+
+
+def captured_spectrum(
+    atom: HeliumBoundFree, radiation_temperature_k: float | None = None
+) -> FloatArray:
+    """What electrons of each energy contribute to recombination, but for their number.
+
+    Parameters
+    ----------
+    atom : HeliumBoundFree
+        Cross sections.
+    radiation_temperature_k : float, K, optional
+        Of the blackbody that stimulates; None: none.
+
+    Returns
+    -------
+    ndarray, shape (n_levels, n_nodes), s^-1
+        g/(g_e g_ion) (8 pi nu^2/c^2) sigma (1 + f) d(nu), g_e g_ion = 4; recombination is its sum
+        with exp(-E_e/kT_m) times the thermal volume.
+    """
+    levels, grid = atom.levels, atom.grid
     energy_ev = levels.ionization_energy_ev[:, None] + levels.chi_ev * grid.energy
     inverse_wavelength = energy_ev / (const.PLANCK_EV_S * const.SPEED_OF_LIGHT_CM_S)
     width_hz = grid.weight * (levels.chi_ev / const.PLANCK_EV_S)
     captured = 8.0 * np.pi * inverse_wavelength**2 * width_hz * atom.cross_section_cm2
     if radiation_temperature_k is not None:
         captured *= 1.0 + planck_occupation(energy_ev, radiation_temperature_k)
-    thermal_ev = const.BOLTZMANN_EV_K * matter_temperature_k
-    with np.errstate(under="ignore"):
-        total = captured @ np.exp(-grid.energy * levels.chi_ev / thermal_ev)
-    volume = thermal_volume_cm3(matter_temperature_k, levels.nuclear_charge)
-    weight = levels.statistical_weight / (2.0 * ION_WEIGHT)
-    coefficients: FloatArray = weight * volume * total
-    return coefficients
+    weighted: FloatArray = (levels.statistical_weight / (2.0 * ION_WEIGHT))[:, None] * captured
+    return weighted
 
 
 def helium_photoionization_per_s(

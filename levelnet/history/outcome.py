@@ -7,7 +7,7 @@ from collections.abc import Iterable
 from ..errors import Outcome
 from ..network.tabulation import TabulatedReduction
 from .cost import table_tolerance
-from .equations import Local
+from .local import Local
 from .integrate import Integrated
 from .setup import Setup
 

@@ -27,9 +27,10 @@ from ..network.populations import LevelPopulations, populations
 from ..network.tabulation import TabulatedReduction
 from ..numerics.stepping import Trajectory
 from .course import electron_fraction_at, state_at
-from .equations import Local, ionized_and_neutral
+from .equations import ionized_and_neutral
 from .integrate import Integrated, Progress
 from .limits import limit_notes
+from .local import Local
 from .notes import notes_of
 from .observables import milestones, optical_depth
 from .outcome import outcome_of, relaxation_hubble

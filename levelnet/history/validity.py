@@ -22,7 +22,8 @@ from ..errors import InputError
 from ..escape.blue_side import Past, log_red_side
 from ..escape.treatment import ResonanceLines
 from ..network.gradient import net_flow_gradient
-from .equations import Local, SlowEquations
+from .equations import SlowEquations
+from .local import Local
 from .integrate import Integrated
 from .line_figures import LineFigures
 from .start import equilibrium_state

@@ -128,8 +128,9 @@ def hydrogen_ladder(
     kept: tuple[tuple[int, int], ...],
     resolve_l_to: int | None = None,
     overrides: tuple[Override, ...] = (),
+    charge: int = 1,
 ) -> Ladder:
-    """Build the ladder of hydrogen.
+    """Build the ladder of hydrogen, or of the helium ion.
 
     Parameters
     ----------
@@ -144,6 +145,8 @@ def hydrogen_ladder(
         Highest n with levels resolved in l, 2 to n_max; None: n_max.
     overrides : tuple of Override, optional
         Factors on lines and cross sections, those inside whole shells too.
+    charge : int, dimensionless
+        1: hydrogen; 2: the helium ion, whose energies are non-relativistic.
 
     Returns
     -------
@@ -156,14 +159,14 @@ def hydrogen_ladder(
     n, l = (np.array(x) for x in zip(*sorted(kept), strict=True))
     if np.any((n < 2) | (n > top) | (l < 0) | (l >= n)):
         raise InputError(f"kept levels {kept}: allowed are (n, l) with 2 <= n <= {top}, 0 <= l < n")
-    levels = hydrogenic_levels(n_max, energies, resolve_l_to=top)
-    resolved = with_overrides(*_atomic_data(n_max, 1), overrides, n_max)
+    levels = hydrogenic_levels(n_max, energies, charge, resolve_l_to=top)
+    resolved = with_overrides(*_atomic_data(n_max, charge), overrides, n_max)
     lines, continuum, shells = whole_shells(*resolved, top)
     position = level_position(n, l)
-    plain = ionization_scale_ev(1) / levels.n.astype(float) ** 2
+    plain = ionization_scale_ev(charge) / levels.n.astype(float) ** 2
     return Ladder(
-        "H I",
-        1,
+        {1: "H I", 2: "He II"}[charge],
+        charge,
         n_max,
         top,
         levels,
@@ -179,11 +182,24 @@ def hydrogen_ladder(
             levels.ionization_energy_ev[position],
         ),
         position,
-        _interior(top, shells.n, set(kept)),
+        interior_of(top, shells.n, set(kept)),
     )
 
 
-def _interior(top: int, shells: IntArray, kept: set[tuple[int, int]]) -> Interior:
+def interior_of(top: int, shells: IntArray, kept: set[tuple[int, int]], shift: int = 0) -> Interior:
+    """Order the levels to be eliminated.
+
+    Parameters
+    ----------
+    top : int
+        Highest n resolved in l.
+    shells : ndarray of int
+        n of whole shells.
+    kept : set of (n, l)
+        Levels that are kept.
+    shift : int
+        What is added to positions, where other levels stand first.
+    """
     first = []
     for l in range(top):
         n = max(l + 1, 2)
@@ -202,7 +218,7 @@ def _interior(top: int, shells: IntArray, kept: set[tuple[int, int]]) -> Interio
         BlockShape.of(sizes),
         np.concatenate([n_all, shells]),
         np.concatenate([l_all, np.full_like(shells, -1)]),
-        np.concatenate([level_position(n_all, l_all), top * (top - 1) // 2 + shells - 1]),
+        np.concatenate([level_position(n_all, l_all), top * (top - 1) // 2 + shells - 1]) + shift,
         np.concatenate([idle, np.zeros(len(shells), dtype=np.bool_)]),
     )
 

@@ -21,8 +21,8 @@ from .ladder import Ladder
 from .reduced import ReducedRates
 from .reduction import Node, Pairs
 
-# Stored in place of the logarithm of an exchange rate that is zero.
-_NEVER = -700.0
+NEVER = -700.0
+"""Stored in place of the logarithm of an exchange rate that is zero."""
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -78,7 +78,7 @@ def rate_constants(ladder: Ladder, pairs: Pairs) -> RateConstants:
 
 def stack(node: Node) -> FloatArray:
     """One vector per node, shape (n_pairs + n_kept * n_energies,)."""
-    return np.concatenate([np.maximum(node.log_exchange, _NEVER), node.log_spectrum.ravel()])
+    return np.concatenate([np.maximum(node.log_exchange, NEVER), node.log_spectrum.ravel()])
 
 
 def assemble_rates(

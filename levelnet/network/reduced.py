@@ -18,9 +18,13 @@ class KeptLevels:
     n, l : ndarray of int
         Quantum numbers, in ascending order of energy.
     statistical_weight : ndarray, dimensionless
-        2 (2l + 1).
+        2 (2l + 1); of helium (2 spin + 1)(2l + 1).
     energy_ev, ionization_energy_ev : ndarray, eV
         Above the ground state, and to the continuum.
+    ground_weight : float, dimensionless
+        Weight of the ground state: 2, of helium 1.
+    spin : ndarray of int, or None
+        Total spin of helium, 0 or 1.
     """
 
     n: IntArray
@@ -28,10 +32,14 @@ class KeptLevels:
     statistical_weight: FloatArray
     energy_ev: FloatArray
     ionization_energy_ev: FloatArray
+    ground_weight: float = 2.0
+    spin: IntArray | None = None
 
     def __post_init__(self) -> None:
         """Check shapes and make every array read-only."""
         shape = (len(self.n),)
+        if self.spin is not None:
+            frozen_array(self, "spin", shape, int)
         frozen_array(self, "n", shape, int)
         frozen_array(self, "l", shape, int)
         for name in ("statistical_weight", "energy_ev", "ionization_energy_ev"):

@@ -81,7 +81,7 @@ def log_boltzmann_populations(
 ) -> FloatArray:
     """Natural log of the populations in Boltzmann equilibrium with the ground state at T_r."""
     kt = const.BOLTZMANN_EV_K * radiation_temperature_k
-    weight = ground_fraction * kept.statistical_weight / 2.0
+    weight = ground_fraction * kept.statistical_weight / kept.ground_weight
     log_population: FloatArray = np.log(weight) - kept.energy_ev / kt
     return log_population
 

@@ -72,6 +72,10 @@ class BlockShape:
         side, begin = self.size[block], self.factor_start[block]
         return buffer[begin : begin + side * side].reshape(side, side).T
 
+    def slice(self, block: int) -> slice:
+        """Where the unknowns of `block` stand in a vector."""
+        return slice(int(self.start[block]), int(self.start[block] + self.size[block]))
+
     def part(self, vector: NDArray[Scalar], block: int) -> NDArray[Scalar]:
         """View of the unknowns of `block` along the last axis."""
         begin = self.start[block]

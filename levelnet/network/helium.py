@@ -1,0 +1,317 @@
+"""Neutral helium reduced to the levels that talk to its ground state.
+
+Singlets and triplets are two ladders without a line between them, each block tridiagonal in l like
+hydrogen and eliminated in the same symmetric form; they meet in the ground state and the continuum.
+Quantum defects are no small shift, so that every line takes the energies of its own levels, and
+lines with n = n' take part.
+"""
+
+from __future__ import annotations
+
+import functools
+import itertools
+import math
+from collections.abc import Callable
+from dataclasses import dataclass
+from typing import NamedTuple
+
+import numpy as np
+
+from .. import constants as const
+from ..arrays import FloatArray, IntArray
+from ..atomic.detailed_balance import log_upward_ratio, saha_coefficients, thermal_volume_cm3
+from ..atomic.helium_bound_free import (
+    ION_WEIGHT,
+    HeliumBoundFree,
+    captured_spectrum,
+    helium_bound_free,
+    helium_photoionization_per_s,
+)
+from ..atomic.helium_levels import HeliumLevels, helium_levels
+from ..atomic.helium_lines import HeliumLines, helium_lines
+from ..errors import RangeError
+from ..numerics.block_cholesky import factor_symmetric
+from ..numerics.chebyshev import ChebyshevSeries, chebyshev_nodes
+from .ladder import Interior, interior_of
+from .rates import NEVER, RateConstants, assemble_rates, largest_rate_error
+from .reduced import KeptLevels, ReducedRates
+
+KeptTerms = tuple[tuple[int, int, int], ...]
+# Where the error is measured, as fractions of the range: off every set of nodes.
+_CHECKS = (0.0071, 0.0413, 0.1237, 0.2719, 0.4873, 0.7331, 0.9717)
+_MOST_NODES = 200
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class HeliumLadders:
+    """He I with the split into kept levels and interior.
+
+    Attributes
+    ----------
+    levels, lines, bound_free : HeliumLevels, HeliumLines, HeliumBoundFree
+        The atom.
+    kept : KeptLevels
+        The kept levels, by energy.
+    kept_position : ndarray of int, shape (n_kept,)
+        Where they stand in `levels`.
+    interior : tuple of two Interior
+        Singlets and triplets; `position` counts in `levels`.
+    """
+
+    levels: HeliumLevels
+    lines: HeliumLines
+    bound_free: HeliumBoundFree
+    kept: KeptLevels
+    kept_position: IntArray
+    interior: tuple[Interior, Interior]
+
+
+class _KeptLines(NamedTuple):
+    """Rates between one kept level and all levels of its spin; shape (n_levels,), s^-1."""
+
+    out: FloatArray
+    back: FloatArray
+
+
+@functools.lru_cache(maxsize=2)
+def _atom(n_max: int, hydrogenic: bool) -> tuple[HeliumLevels, HeliumLines, HeliumBoundFree]:
+    levels = helium_levels(n_max, hydrogenic)
+    return levels, helium_lines(levels), helium_bound_free(levels)
+
+
+def helium_ladders(n_max: int, kept: KeptTerms, hydrogenic: bool = False) -> HeliumLadders:
+    """Build He I.
+
+    Parameters
+    ----------
+    n_max : int, dimensionless
+        Highest n, 2 to 100.
+    kept : tuple of (n, l, spin)
+        Levels to keep.
+    hydrogenic : bool
+        The limit in which all must equal hydrogen.
+    """
+    levels, lines, continuum = _atom(n_max, hydrogenic)
+    position = np.array(
+        sorted((levels.index(*one) for one in kept), key=lambda i: _order(levels, i))
+    )
+    chosen = KeptLevels(
+        levels.n[position],
+        levels.l[position],
+        levels.statistical_weight[position],
+        levels.energy_ev[position],
+        levels.ionization_energy_ev[position],
+        1.0,
+        levels.spin[position],
+    )
+    first_triplet = int(np.flatnonzero(levels.spin == 1)[0])
+    sides = []
+    for spin, shift in ((0, 0), (1, first_triplet - 1)):
+        own = {(n, l) for n, l, s in kept if s == spin}
+        sides.append(interior_of(n_max, np.zeros(0, dtype=np.int64), own, shift))
+    return HeliumLadders(levels, lines, continuum, chosen, position, (sides[0], sides[1]))
+
+
+def _order(levels: HeliumLevels, index: int) -> float:
+    return float(levels.energy_ev[index])
+
+
+def _line_rates(
+    ladders: HeliumLadders, own: IntArray, other: IntArray, strength: FloatArray, kt_ev: float
+) -> tuple[FloatArray, FloatArray]:
+    """Rates from `own` to `other` and back, s^-1; zero where there is no line."""
+    levels = ladders.levels
+    gap = levels.energy_ev[other] - levels.energy_ev[own]
+    x = np.abs(gap) / kt_ev
+    with np.errstate(divide="ignore", invalid="ignore"):
+        mean = np.where(strength > 0.0, strength / (2.0 * np.sinh(0.5 * x)), 0.0)
+    ratio = levels.statistical_weight[other] / levels.statistical_weight[own]
+    rise = np.sqrt(ratio) * np.exp(-0.5 * gap / kt_ev)
+    return mean * rise, mean / rise
+
+
+def _kept_lines(ladders: HeliumLadders, k: int, kt_ev: float) -> _KeptLines:
+    levels, own = ladders.levels, int(ladders.kept_position[k])
+    out, back = np.zeros((2, len(levels)))
+    n, l, spin = (int(q[own]) for q in (levels.n, levels.l, levels.spin))
+    for other_l in (l - 1, l + 1):
+        if not 0 <= other_l < levels.n_max:
+            continue
+        partner = levels.series(other_l, spin)
+        partner = partner[levels.n[partner] > 1]
+        block = ladders.lines.block(spin, min(l, other_l))
+        if other_l > l:
+            strength = block[n - l - 1, levels.n[partner] - other_l - 1]
+        else:
+            strength = block[levels.n[partner] - other_l - 1, n - l - 1]
+        out[partner], back[partner] = _line_rates(
+            ladders, np.full_like(partner, own), partner, strength, kt_ev
+        )
+    return _KeptLines(out, back)
+
+
+def _fates(
+    ladders: HeliumLadders, spin: int, kt_ev: float, photo: FloatArray, to_kept: FloatArray
+) -> FloatArray:
+    """Chance of each interior level of one spin to reach each kept level, (n_kept, n_unknowns)."""
+    inside = ladders.interior[spin]
+    where, levels, shape = inside.position, ladders.levels, inside.shape
+    leaving = to_kept[:, where]
+    leaving[:, inside.idle] = 0.0
+    sink = photo[where] + leaving.sum(axis=0)
+    sink[inside.idle] = 1.0
+    energy = levels.energy_ev[where]
+    log_weight = np.log(levels.statistical_weight[where]) - (energy - energy.min()) / kt_ev
+    root = np.exp(0.5 * log_weight)
+    means, outflow = [], sink.copy()
+    for l in range(len(shape.size) - 1):
+        rows, columns = shape.slice(l), shape.slice(l + 1)
+        own, other = where[rows], where[columns]
+        block = ladders.lines.block(spin, l)
+        strength = block[np.ix_(levels.n[own] - l - 1, levels.n[other] - l - 2)].copy()
+        strength[inside.idle[rows]] = 0.0
+        strength[:, inside.idle[columns]] = 0.0
+        x = np.abs(levels.energy_ev[own][:, None] - levels.energy_ev[other]) / kt_ev
+        mean = np.where(
+            strength > 0.0, strength / (2.0 * np.sinh(0.5 * np.maximum(x, 1e-300))), 0.0
+        )
+        means.append(mean)
+        outflow[rows] += mean @ root[columns] / root[rows]
+        outflow[columns] += root[rows] @ mean / root[columns]
+    scale = np.sqrt(outflow)
+    sent = np.zeros(shape.n_unknowns)
+    weight = root * scale
+    for l, mean in enumerate(means):
+        rows, columns = shape.slice(l), shape.slice(l + 1)
+        mean /= np.outer(scale[rows], scale[columns])
+        sent[columns] = weight[rows] @ mean
+    coupling = np.concatenate([mean.ravel() for mean in means])
+    solver = factor_symmetric(shape, coupling, weight, sent, sink * root / scale)
+    chance: FloatArray = solver.solve(leaving * (root / scale)) / (root * scale)
+    return chance
+
+
+def reduce_helium(ladders: HeliumLadders, radiation_temperature_k: float) -> FloatArray:
+    """Reduce He I at one T_r.
+
+    Returns
+    -------
+    ndarray, shape (n_pairs + n_kept * n_energies,)
+        ln of the downward exchange (s^-1) of each pair of kept levels, then ln of the spectral
+        capture into each, as :func:`levelnet.network.rates.assemble_rates` takes them.
+    """
+    kt = const.BOLTZMANN_EV_K * radiation_temperature_k
+    photo = helium_photoionization_per_s(ladders.bound_free, radiation_temperature_k)
+    rows = [_kept_lines(ladders, k, kt) for k in range(len(ladders.kept))]
+    to_kept = np.array([row.back for row in rows])
+    fates = np.zeros((len(rows), len(ladders.levels)))
+    for spin in (0, 1):
+        inside = ladders.interior[spin]
+        if inside.shape.n_unknowns:
+            fates[:, inside.position] = _fates(ladders, spin, kt, photo, to_kept)
+    fates[:, ladders.kept_position] = 0.0
+    detour = np.array([row.out for row in rows]) @ fates.T
+    direct = np.array([row.out[ladders.kept_position] for row in rows])
+    total = detour + direct
+    lower, upper = np.triu_indices(len(rows), 1)
+    with np.errstate(divide="ignore"):
+        exchange = np.maximum(np.log(total[upper, lower]), NEVER)
+    fates[:, ladders.kept_position] = np.eye(len(rows))
+    spectrum = fates @ captured_spectrum(ladders.bound_free, radiation_temperature_k)
+    return np.concatenate([exchange, np.log(np.maximum(spectrum, 1e-300)).ravel()])
+
+
+def helium_rate_constants(ladders: HeliumLadders) -> RateConstants:
+    """What turns the stored values of :func:`reduce_helium` into rates."""
+    kept, charge = ladders.kept, ladders.levels.nuclear_charge
+    lower, upper = np.triu_indices(len(kept), 1)
+    weights = kept.statistical_weight[upper], kept.statistical_weight[lower]
+    unit_k = ladders.levels.chi_ev / const.BOLTZMANN_EV_K
+    return RateConstants(
+        len(kept),
+        lower,
+        upper,
+        np.zeros(len(lower)),
+        (kept.energy_ev[upper] - kept.energy_ev[lower]) / const.BOLTZMANN_EV_K,
+        log_upward_ratio(*weights, 0.0, 1.0),
+        ladders.bound_free.grid.energy[:, None] * unit_k,
+        float(thermal_volume_cm3(1.0, charge)),
+        saha_coefficients(kept.statistical_weight / ION_WEIGHT, kept.ionization_energy_ev, charge),
+    )
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class HeliumReduction:
+    """He I reduced and interpolated in ln T_r.
+
+    Attributes
+    ----------
+    kept : KeptLevels
+        The kept levels.
+    constants : RateConstants
+        What turns stored values into rates.
+    series : ChebyshevSeries
+        Stored values over ln T_r.
+    interpolation_error : float
+        Largest error off the nodes of the ln of any rate.
+    """
+
+    kept: KeptLevels
+    constants: RateConstants
+    series: ChebyshevSeries
+    interpolation_error: float
+
+    def rates(self, radiation_temperature_k: float, matter_temperature_k: float) -> ReducedRates:
+        """Effective rates; RangeError outside the tabulated T_r."""
+        x = math.log(radiation_temperature_k)
+        if not self.series.low - 1e-12 <= x <= self.series.high + 1e-12:
+            low, high = math.exp(self.series.low), math.exp(self.series.high)
+            raise RangeError(
+                f"T_r = {radiation_temperature_k:g} K: helium is tabulated from {low:g} to "
+                f"{high:g} K"
+            )
+        value, slope = self.series.evaluate(x)
+        return assemble_rates(
+            self.constants, value, slope, radiation_temperature_k, matter_temperature_k
+        )
+
+
+def tabulate_helium(
+    ladders: HeliumLadders,
+    low_k: float,
+    high_k: float,
+    tolerance: float,
+    recall: Callable[[float, Callable[[float], FloatArray]], FloatArray] | None = None,
+) -> HeliumReduction:
+    """Reduce He I at Chebyshev nodes in ln T_r until the error off the nodes is below `tolerance`.
+
+    Parameters
+    ----------
+    ladders : HeliumLadders
+        The atom.
+    low_k, high_k : float, K
+        Range of T_r.
+    tolerance : float, dimensionless
+        Largest error in the ln of any rate.
+    recall : callable, optional
+        ``recall(T_r, compute)`` gives stored values or computes and stores them.
+    """
+
+    def exact(x: float) -> FloatArray:
+        temperature_k = math.exp(x)
+        compute = functools.partial(reduce_helium, ladders)
+        return compute(temperature_k) if recall is None else recall(temperature_k, compute)
+
+    low, high = math.log(low_k), math.log(high_k)
+    constants = helium_rate_constants(ladders)
+    truth = {x: exact(x) for x in (low + (high - low) * part for part in _CHECKS)}
+    for count in itertools.accumulate(itertools.repeat(8), initial=16):
+        values = np.array([exact(x) for x in chebyshev_nodes(low, high, count)])
+        series = ChebyshevSeries.fit(low, high, values)
+        error = max(
+            largest_rate_error(constants, series.evaluate(x)[0], value, x)
+            for x, value in truth.items()
+        )
+        if error <= tolerance or count >= _MOST_NODES:
+            break
+    return HeliumReduction(ladders.kept, constants, series, error)
