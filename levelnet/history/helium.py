@@ -1,8 +1,8 @@
 """Helium among the slow variables: its two ionizations, their rates of change and derivatives.
 
-The variables are a = ln[(x_HeII + x_HeIII)/x_HeI] and b = ln(x_HeIII/x_HeII), so that every fraction
-follows to full relative precision. With F_1 and F_2 the net recombinations to HeI and to HeII per
-helium nucleus and second, and y = 1 - x_HeI,
+The variables are a = ln[(x_HeII + x_HeIII)/x_HeI] and b = ln(x_HeIII/x_HeII), so that every
+fraction follows to full relative precision. With F_1 and F_2 the net recombinations to HeI and to
+HeII per helium nucleus and second, and y = 1 - x_HeI,
 
     da/ds = -F_1/(H x_HeI y),
     db/ds = -[F_2 (1/x_HeIII + 1/x_HeII) - F_1/x_HeII]/H.
@@ -30,8 +30,8 @@ from ..network.reduced import Reduced
 from ..network.solve import log_boltzmann_populations, solve_kept
 from .local import Local
 
-# Pull to Saha equilibrium in Hubble rates, and x_HeIII/x_HeII (its ln) below which it replaces the
-# network: nothing of it is left to see.
+# Pull to Saha equilibrium in Hubble rates, and ln of x_HeIII/x_HeII at which it is held: nothing of
+# it is left to see.
 _PULL, _GONE = 1e9, -40.0
 ION_WEIGHT = 2.0  # of He+ in its ground state
 
@@ -234,10 +234,14 @@ class HeliumEquations:
     def rates(self, around: Around, state: FloatArray) -> Rates:
         """Rates of change and derivatives at (a, b)."""
         x = self.fractions(state)
+        if not min(x.neutral, x.single) > 0.0:  # a trial far off; the step is taken again
+            return Rates(*(np.full(shape, np.nan) for shape in ((2,), (2, 2), (2,), (2,), (2,))))
         first = self.first.flow(around, x.single, x.neutral)
         lowest = self._first_rates(around, x, first)
-        if self.second is None or state[1] < _GONE:
+        if self.second is None:
             return _stacked(lowest, self._saha_rates(around, float(state[1])))
+        if state[1] < _GONE:
+            return _stacked(lowest, [0.0] * 6)
         second = self.second.flow(around, x.double, x.single)
         return _stacked(lowest, _second_rates(around, x, first, second))
 
@@ -259,7 +263,7 @@ class HeliumEquations:
         return [_PULL * one for one in terms]
 
     def saha_log_ratio(self, stage: int, around: Around) -> float:
-        """Ln of the ratio of an ion to the stage below (0: He II/He I) in Saha equilibrium at T_m."""
+        """Ln of an ion over the stage below it (0: He II/He I) in Saha equilibrium at T_m."""
         electrons_cm3 = around.electrons_per_helium * around.helium_density_cm3
         # Ground state over ion: 1 over 2 for He I, 2 over 1 for He II, all over the electron's 2.
         weight = (1.0 / ION_WEIGHT, 2.0)[stage]

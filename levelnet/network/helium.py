@@ -181,10 +181,10 @@ def _fates(
     scale = np.sqrt(outflow)
     sent = np.zeros(shape.n_unknowns)
     weight = root * scale
-    for l, mean in enumerate(means):
+    for l in range(len(means)):
         rows, columns = shape.slice(l), shape.slice(l + 1)
-        mean /= np.outer(scale[rows], scale[columns])
-        sent[columns] = weight[rows] @ mean
+        means[l] /= np.outer(scale[rows], scale[columns])
+        sent[columns] = weight[rows] @ means[l]
     coupling = np.concatenate([mean.ravel() for mean in means])
     solver = factor_symmetric(shape, coupling, weight, sent, sink * root / scale)
     chance: FloatArray = solver.solve(leaving * (root / scale)) / (root * scale)

@@ -105,6 +105,8 @@ def rosenbrock_step(
             point = state + sum((a * u for a, u in zip(_A[k], stages, strict=True)), np.zeros(n))
         else:
             point = point + stages[-1]
+        if not np.isfinite(point).all():
+            return point, np.full(n, np.inf)  # a step far too long
         value = first if k == 0 else rate(time + _NODE[k] * step, point)
         right = value + step * _TIME[k] * drift
         for c, u in zip(_C[k], stages, strict=True):
