@@ -305,7 +305,7 @@ def _march(
         setup.lines,
         fitted_step(asked),
         setup.two_photon_rate_per_s,
-        factor.two_photon_rate / factor.energy,
+        factor.two_photon_rate,
     )
     wanted = outputs[:: max(1, math.ceil(len(outputs) / _MOST_SPECTRA))]
     return cells, march(cells, path, path.start, state, end, wanted)
