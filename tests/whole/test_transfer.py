@@ -97,8 +97,8 @@ def test_spectrum_is_thermal_in_lyman_alpha() -> None:
     inside = (field.redshift < 1650.0) & (field.redshift > 300.0)
     found = field.log_distortion[inside, below]
     assert expected[inside].max() > 1.0
-    # What remains is the interpolation between outputs 9 per cent apart.
-    np.testing.assert_allclose(found, expected[inside], rtol=0.01, atol=1e-3)
+    # What remains is the interpolation between outputs 9 per cent apart, worst at the start.
+    np.testing.assert_allclose(found, expected[inside], rtol=1e-4, atol=2e-3)
 
 
 def test_field_above_the_lines_is_a_blackbody_and_below_lyman_alpha_it_is_brighter() -> None:

@@ -1,9 +1,10 @@
 """Published sizes of what a resolved field does to x_e, each to 0.1 per cent of x_e (slow).
 
-Sizes of single effects depend on what else is on: each test says which baseline its authors had, and
-which one reproduces them. The universe is one of the time of the papers (h = 0.701, omega_b =
+Sizes of single effects depend on what else is on: each test says which baseline
+reproduces the published one. The universe is one of the time of the papers (h = 0.701, omega_b =
 0.02265, omega_m = 0.1369, T_0 = 2.725 K, Y = 0.24; from memory); the sizes differ from those in the
-other tests' universe by 0.03 per cent of x_e at most. Published figures are taken from the abstracts.
+universe of the other tests by 0.03 per cent of x_e at most. What is published stands in the
+abstracts of the papers.
 
 The papers:
 Chluba & Sunyaev 2007, Astron. Astrophys. 475, 109; Hirata 2008, Phys. Rev. D 78, 023001;
@@ -57,8 +58,8 @@ def test_feedback() -> None:
 def test_two_photon_and_raman() -> None:
     """-1.3 per cent near z = 1300, +1.3 near 900 (Hirata 2008).
 
-    Two-photon decay and absorption of 2s, ns and nd and Raman scattering, added to lines with
-    feedback. On stimulated 2s decay the same would be -0.8 and +2.2.
+    On lines with feedback: two-photon decay and absorption of 2s, ns and nd, and Raman scattering.
+    With stimulated 2s decay in the baseline too they would be -0.8 and +2.2.
     """
     on = x_e("feedback", *SECOND_ORDER, two_photon="distorted")
     found = change(x_e("feedback"), on)
