@@ -37,6 +37,8 @@ if TYPE_CHECKING:
     from .history.setup import Setup, load_setup
     from .store.read import read
     from .store.write import write
+    from .studies.escape import escape_study
+    from .studies.escape_records import EscapeStudy
     from .studies.level_records import LevelStudy
     from .studies.levels import level_study
     from .studies.weigh import weigh
@@ -50,6 +52,7 @@ _HOMES = {
     "EffectiveRates": "distilled.effective",
     "EffectiveTable": "distilled.table",
     "Ensemble": "distilled.ensemble",
+    "EscapeStudy": "studies.escape_records",
     "FastHistory": "distilled.fast",
     "History": "history.result",
     "InputError": "errors",
@@ -65,6 +68,7 @@ _HOMES = {
     "einstein_a": "atomic.bound_bound",
     "ensemble": "distilled.ensemble",
     "escape_probability": "escape.sobolev",
+    "escape_study": "studies.escape",
     "from_astropy": "background",
     "history_from_table": "distilled.history",
     "level_study": "studies.levels",
@@ -92,6 +96,7 @@ __all__ = [
     "EffectiveRates",
     "EffectiveTable",
     "Ensemble",
+    "EscapeStudy",
     "FastHistory",
     "History",
     "InputError",
@@ -108,6 +113,7 @@ __all__ = [
     "einstein_a",
     "ensemble",
     "escape_probability",
+    "escape_study",
     "from_astropy",
     "history_from_table",
     "level_study",

@@ -16,7 +16,13 @@ import levelnet
 from levelnet.cli.main import build_parser
 from levelnet.escape.lines import Transfer
 from levelnet.history.setup import Setup, parse_setup
-from levelnet.store import DISTILLED_LAYOUT, LEVEL_LAYOUT, TABLE_LAYOUT, WEIGHING_LAYOUT
+from levelnet.store import (
+    DISTILLED_LAYOUT,
+    ESCAPE_LAYOUT,
+    LEVEL_LAYOUT,
+    TABLE_LAYOUT,
+    WEIGHING_LAYOUT,
+)
 from levelnet.store.layout import groups_of
 
 ROOT = Path(__file__).resolve().parents[1]
@@ -62,7 +68,7 @@ KINDS = {
     "levelnet history": groups_of(("H I",), with_field=True),  # helium has no levels yet
     **{
         kind.name: (*kind.required, *kind.optional)
-        for kind in (LEVEL_LAYOUT, WEIGHING_LAYOUT, TABLE_LAYOUT, DISTILLED_LAYOUT)
+        for kind in (LEVEL_LAYOUT, ESCAPE_LAYOUT, WEIGHING_LAYOUT, TABLE_LAYOUT, DISTILLED_LAYOUT)
     },
 }
 

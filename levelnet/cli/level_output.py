@@ -7,7 +7,7 @@ import math
 from typing import TYPE_CHECKING, Any
 
 from ..quantities import OBSERVABLES
-from .output import aligned, nearest_rows, row
+from .output import aligned, nearest_rows, plain_values, row
 
 if TYPE_CHECKING:
     from ..studies.level_records import LevelStudy
@@ -28,7 +28,7 @@ def level_values(study: LevelStudy, found: Verdict, met: Demands | None = None) 
         "outcome": study.outcome.name,
         "ok": study.outcome.ok,
         "rungs": {
-            **_plain(rungs),
+            **plain_values(rungs),
             "largest_error": rung_errors(study, found.low, found.high),
             "largest_population_change": population_changes(study),
         },
@@ -38,12 +38,12 @@ def level_values(study: LevelStudy, found: Verdict, met: Demands | None = None) 
         "population_redshift": study.population_redshift,
         "level_n": study.level_n,
         "level_l": study.level_l,
-        "limit": _plain(study.limit),
-        "limit_check": _plain(check_limit(study)),
-        "noise": _plain(study.noise),
+        "limit": plain_values(study.limit),
+        "limit_check": plain_values(check_limit(study)),
+        "noise": plain_values(study.noise),
         "held_out": None
         if study.held_out is None
-        else {**_plain(study.held_out), **_plain(check_held_out(study))},
+        else {**plain_values(study.held_out), **plain_values(check_held_out(study))},
         "resolved": None if study.resolved is None else _resolved_values(study, found),
         "verdict": {
             **dataclasses.asdict(found),
@@ -59,17 +59,11 @@ def level_values(study: LevelStudy, found: Verdict, met: Demands | None = None) 
     }
 
 
-def _plain(record: Any) -> Any:
-    if dataclasses.is_dataclass(record):
-        return {one.name: _plain(getattr(record, one.name)) for one in dataclasses.fields(record)}
-    return record
-
-
 def _resolved_values(study: LevelStudy, found: Verdict) -> dict[str, Any]:
     from ..studies.level_checks import enough_resolved, resolved_text, shell_changes
 
     return {
-        **_plain(study.resolved),
+        **plain_values(study.resolved),
         "largest_change": shell_changes(study, found.low, found.high),
         "enough": enough_resolved(study, found.within, found.low, found.high),
         "text": resolved_text(study, found.within, found.low, found.high),

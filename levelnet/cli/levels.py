@@ -97,13 +97,13 @@ def run(options: argparse.Namespace, console: Console) -> int:
     from ..studies.level_records import Question
 
     setup = load_setup(options.setup)
-    requirement = _requirement(options.requirement, setup)
+    requirement = asked_requirement(options.requirement, setup)
     rungs = None if options.rungs is None else whole_numbers("--rungs", options.rungs)
     resolve = () if options.resolve is None else whole_numbers("--resolve", options.resolve)
     target = options.output or Path(f"{options.setup.stem}-levels.h5")
     check_target(target, options.force, options.setup)
     asked = () if requirement is None else tuple(requirement.to_toml().splitlines())
-    question = Question(options.within, *_between(setup, options), asked)
+    question = Question(options.within, *asked_range(setup, options), asked)
     ladder = _checked_ladder(setup, rungs, resolve, options)
     start = time.monotonic()
     study = _study(setup, ladder, resolve, requirement, question, options, console)
@@ -128,7 +128,7 @@ def run(options: argparse.Namespace, console: Console) -> int:
     return 0
 
 
-def _requirement(path: Path | None, setup: Setup) -> Requirement | None:
+def asked_requirement(path: Path | None, setup: Setup) -> Requirement | None:
     """Read a requirement; what the outputs of the setup cannot answer is refused at once."""
     if path is None:
         return None
@@ -141,7 +141,7 @@ def _requirement(path: Path | None, setup: Setup) -> Requirement | None:
     return requirement
 
 
-def _between(setup: Setup, options: argparse.Namespace) -> tuple[float, float]:
+def asked_range(setup: Setup, options: argparse.Namespace) -> tuple[float, float]:
     """The range that the verdict is about, inside the outputs of the setup."""
     from ..history.integrate import output_redshifts
     from ..studies.level_checks import covered

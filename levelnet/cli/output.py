@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import dataclasses
 import json
 import math
 from collections.abc import Callable, Sequence
@@ -78,6 +79,15 @@ def _plain(value: Any) -> Any:
     return value if isinstance(value, str | int | float | bool | None) else str(value)
 
 
+def plain_values(record: Any) -> Any:
+    """Take records apart into plain mappings of their fields."""
+    if dataclasses.is_dataclass(record):
+        return {
+            one.name: plain_values(getattr(record, one.name)) for one in dataclasses.fields(record)
+        }
+    return record
+
+
 def size_text(memory_bytes: float) -> str:
     """Bytes as MB, GB or TB, in powers of 1000."""
     for unit, size in (("TB", 1e12), ("GB", 1e9)):
@@ -141,12 +151,13 @@ def history_values(history: History) -> dict[str, Any]:
             zip(history.channels.names, history.channels.cumulative_share[-1], strict=True)
         ),
         "diagnostics": {name: getattr(how, name) for name in how.__slots__},
-        "field": _field_values(history.field),
+        "field": field_values(history.field),
         "notes": list(history.notes),
     }
 
 
-def _field_values(field: RadiationField | None) -> dict[str, Any] | None:
+def field_values(field: RadiationField | None) -> dict[str, Any] | None:
+    """Say how much of a field there is; its numbers are in the file."""
     if field is None:
         return None
     return {

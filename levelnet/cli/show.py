@@ -21,7 +21,7 @@ NAME = "show"
 SUMMARY = "sum up a result file; draw figures, write a table"
 DESCRIPTION = (
     "Print the summary of a result file, a table of effective rates, a history made from one or a "
-    "weighing or a study of levels; write its figures or its table."
+    "weighing or a study; write its figures or its table."
 )
 EXAMPLE = "levelnet show result.h5 --plot figures"
 
@@ -88,9 +88,10 @@ def _screens() -> dict[type, Callable[..., None]]:
     from ..distilled.fast import FastHistory
     from ..distilled.table import EffectiveTable
     from ..history.result import History
+    from ..studies.escape_records import EscapeStudy
     from ..studies.level_records import LevelStudy
     from ..studies.weighing import Weighing
-    from .show_table import show_distilled, show_levels, show_table
+    from .show_table import show_distilled, show_escape, show_levels, show_table
     from .show_weighing import show_weighing
 
     return {
@@ -99,6 +100,7 @@ def _screens() -> dict[type, Callable[..., None]]:
         FastHistory: show_distilled,
         Weighing: show_weighing,
         LevelStudy: show_levels,
+        EscapeStudy: show_escape,
     }
 
 

@@ -7,16 +7,18 @@ from pathlib import Path
 from typing import TYPE_CHECKING
 
 from ..errors import InputError
+from . import escape, levels
 from .console import Console
 from .distill import check_exports, write_exports
+from .escape_output import escape_summary, escape_values
 from .level_output import level_summary, level_values
-from .levels import judged, save_figures
 from .output import print_result
 from .table_output import distilled_summary, distilled_values, table_summary, table_values
 
 if TYPE_CHECKING:
     from ..distilled.fast import FastHistory
     from ..distilled.table import EffectiveTable
+    from ..studies.escape_records import EscapeStudy
     from ..studies.level_records import LevelStudy
 
 
@@ -24,14 +26,29 @@ def show_levels(
     study: LevelStudy, folder: Path | None, options: argparse.Namespace, console: Console
 ) -> None:
     """Print the summary of a study and draw it where that was asked for."""
-    if options.redshift is not None or options.csv is not None or options.export:
-        raise InputError("--redshift, --csv, --export: not for a study of levels")
-    written = save_figures(study, folder, options.force, console)
-    found, met = judged(study)
+    _refuse_all(options, "a study of levels")
+    written = levels.save_figures(study, folder, options.force, console)
+    found, met = levels.judged(study)
     print_result(
         options.json,
         lambda: level_values(study, found, met),
         lambda: level_summary(study, found, met),
+        file=options.file,
+        written=written,
+    )
+
+
+def show_escape(
+    study: EscapeStudy, folder: Path | None, options: argparse.Namespace, console: Console
+) -> None:
+    """Print the summary of a study of the escape and draw it where that was asked for."""
+    _refuse_all(options, "a study of the escape")
+    written = escape.save_figures(study, folder, options.force, console)
+    found, met = escape.judged(study)
+    print_result(
+        options.json,
+        lambda: escape_values(study, found, met),
+        lambda: escape_summary(study, found, met),
         file=options.file,
         written=written,
     )
@@ -74,6 +91,11 @@ def show_distilled(
         file=options.file,
         written=[],
     )
+
+
+def _refuse_all(options: argparse.Namespace, what: str) -> None:
+    if options.redshift is not None or options.csv is not None or options.export:
+        raise InputError(f"--redshift, --csv, --export: not for {what}")
 
 
 def _refuse(options: argparse.Namespace, instead: str) -> None:

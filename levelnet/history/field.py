@@ -343,12 +343,15 @@ def _record(setup: Setup, equations: SlowEquations, marched: Marched) -> FieldRe
 
 
 def _field(equations: SlowEquations, cells: Cells, marched: Marched) -> RadiationField:
+    when, first = np.unique(marched.spectrum_time, return_index=True)
     # At the end of a step packets stand at the upper edges of the cells they are about to enter.
-    energy_ev = cells.energy_ev * np.exp(cells.offset + 0.5 * cells.step)
-    when = np.unique(marched.spectrum_time)
-    spectra = marched.track.spectra[: len(marched.spectrum_time)]
-    spectra = spectra[np.unique(marched.spectrum_time, return_index=True)[1]]
+    # The mean over a cell is better than either: where scattering is fast it alone is settled.
+    edges = marched.track.spectra[first]
+    middle = 0.5 * (edges[:, 1:] + edges[:, :-1])
+    core = cells.line_cell - 1
+    middle[:, core] = edges[:, core]  # a thick line is as its red side
+    energy_ev = cells.energy_ev * np.exp(cells.offset[1:])
     radiation_k = equations.cosmology.cmb_temperature_k * np.exp(-when)
     return RadiationField(
-        np.expm1(-when), energy_ev, log_distortion(spectra, energy_ev, radiation_k[:, None])
+        np.expm1(-when), energy_ev, log_distortion(middle, energy_ev, radiation_k[:, None])
     )

@@ -84,25 +84,27 @@ def integrate_history(
     keeps : tuple of (n, l)
         Levels to keep from elimination besides those that the lines need.
     start_above : float, dimensionless
-        A redshift above which the integration must start, though Saha equilibrium ends lower.
+        A redshift above which the integration must start, though Saha equilibrium ends lower; a
+        resolved field starts lower still, and the network is known up to here.
     """
     tell("atomic data", 0.0)
     chosen = line_treatment or member(setup.lines.hydrogen)
     handover = setup_handover(setup, chosen)
-    if start_above > handover.redshift:
+    resolved = isinstance(chosen, ResolvedField)
+    if start_above > handover.redshift and not resolved:
         handover = Handover(start_above, handover.departure)
     ladder = build_ladder(setup, keeps=(*chosen.keeps, *setup.lines.field_levels, *keeps))
     redshift = output_redshifts(setup)
     factor = scales(setup.physics)
     reduced: Reduced = live_reduction(ladder)
     if setup.accuracy.interpolate:
-        low = redshift[-1]
-        if isinstance(chosen, ResolvedField):
+        low, high = redshift[-1], max(redshift[0], handover.redshift, start_above)
+        if resolved:
             low = _later(_march_redshifts(handover, redshift)[-1], _BEYOND)
-        span = min(low, handover.redshift), max(redshift[0], handover.redshift)
+        span = min(low, handover.redshift), high
         reduced = _table(setup, ladder, span, tell, pieces)
     equations = slow_equations(setup, with_scales(reduced, factor), chosen)
-    if isinstance(chosen, ResolvedField):
+    if resolved:
         run = march_field(setup, equations, handover, redshift, tell)
         return Integrated(run.equations, handover, run.trajectory, ladder, redshift, reduced, run)
     trajectory = integrate_slow(setup, equations, handover, redshift, tell)

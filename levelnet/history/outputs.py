@@ -100,7 +100,7 @@ def assemble_history(setup: Setup, integrated: Integrated, tell: Progress) -> Hi
         depth,
         visibility,
         (_species(integrated, outputs),),
-        _channels(integrated, steps, redshift, outputs),
+        channels(integrated, steps, redshift, np.array([o.local.solution.flow for o in outputs])),
         figures,
         marks,
         _diagnostics(integrated, outputs, slowest),
@@ -170,13 +170,13 @@ def _species(integrated: Integrated, outputs: list[_Output]) -> SpeciesPopulatio
     return SpeciesPopulations(ladder.species, levels, population, log_departure)
 
 
-def _channels(
-    integrated: Integrated, steps: Steps, redshift: FloatArray, outputs: list[_Output]
+def channels(
+    integrated: Integrated, steps: Steps, redshift: FloatArray, net: FloatArray
 ) -> Channels:
+    """Channels from the net flows to the ground state, shape (n_redshift, n_kept), s^-1."""
     kept = integrated.ladder.kept
     levels = zip(kept.n.tolist(), kept.l.tolist(), strict=True)
     names = tuple(f"{level_name(n, l)}-1s" for n, l in levels)
-    net = np.array([o.local.solution.flow for o in outputs])
     share = net / net.sum(axis=1, keepdims=True)
     cumulative = _cumulative(integrated.trajectory, steps.share)(-np.log1p(redshift))
     total = cumulative.sum(axis=1, keepdims=True)

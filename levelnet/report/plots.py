@@ -87,7 +87,27 @@ def channel_figure(history: History) -> Figure:
     matplotlib Figure
         Left: share of the net rate at that redshift. Right: share of all since the start.
     """
-    channels, redshift = history.channels, history.redshift
+    peak = history.milestones.visibility_peak_redshift
+    return shares_figure(history.channels, history.redshift, peak)
+
+
+def shares_figure(channels: Channels, redshift: FloatArray, peak: float) -> Figure:
+    """Shares of channels at each redshift, and cumulative.
+
+    Parameters
+    ----------
+    channels : Channels
+        Beyond the five largest the rest is summed into one curve.
+    redshift : ndarray, shape (n_redshift,), dimensionless
+        Descending.
+    peak : float, dimensionless
+        Where the visibility peaks; NaN marks nothing.
+
+    Returns
+    -------
+    matplotlib Figure
+        As of :func:`channel_figure`.
+    """
     with style.house_style():
         figure = style.new_figure(style.TWO_COLUMNS_IN, 3.2)
         left, right = figure.subplots(1, 2)
@@ -108,9 +128,7 @@ def channel_figure(history: History) -> Figure:
             axes.set_xlim(float(redshift[-1]), float(redshift[0]))
             axes.set_ylim(*_share_limits([values for _, values in curves]))
             axes.set_xlabel(r"redshift $z$")
-            _mark_redshift(
-                axes, history.milestones.visibility_peak_redshift, "peak of $g$", at_top=True
-            )
+            _mark_redshift(axes, peak, "peak of $g$", at_top=True)
             style.panel_letter(axes, letter)
         left.set_ylabel(r"share of the net rate to 1s at $z$")
         right.set_ylabel(r"cumulative share down to $z$")

@@ -48,13 +48,30 @@ def spectrum_figure(history: History, redshifts: Sequence[float] | None = None) 
     """
     if history.field is None:
         raise InputError("spectrum: this history holds no radiation field")
-    lines_ev, limit_ev = _lyman_energies_ev(history.levels("H I"))
+    return field_figure(history.field, history.levels("H I"), redshifts)
+
+
+def field_figure(
+    field: RadiationField, levels: LevelSet, redshifts: Sequence[float] | None = None
+) -> Figure:
+    """Distortion of a field at some redshifts; see :func:`spectrum_figure`.
+
+    Parameters
+    ----------
+    field : RadiationField
+        What to draw.
+    levels : LevelSet
+        Of hydrogen: their Lyman lines are marked.
+    redshifts : sequence of float or None, dimensionless
+        As for :func:`draw_spectrum`.
+    """
+    lines_ev, limit_ev = _lyman_energies_ev(levels)
     with style.house_style():
         figure = style.new_figure(style.TWO_COLUMNS_IN, 3.2)
         left, right = figure.subplots(1, 2)
-        draw_spectrum(left, history.field, redshifts)
+        draw_spectrum(left, field, redshifts)
         _mark_lines(left, lines_ev, limit_ev)
-        draw_spectrum(right, history.field, redshifts, around_ev=float(lines_ev[0]))
+        draw_spectrum(right, field, redshifts, around_ev=float(lines_ev[0]))
         right.set_xlabel(r"$(\nu - \nu_\alpha) / \nu_\alpha$")
         right.set_ylabel("")
         style.panel_letter(left, "a")

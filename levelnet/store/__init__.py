@@ -1,5 +1,6 @@
 """HDF5 files and text tables; the only place that imports h5py, and only when a file is opened."""
 
+from .escape_layout import ESCAPE_LAYOUT, describe_escape_layout
 from .exports import export_paths, write_export
 from .layout import LAYOUT_NAME, LAYOUT_VERSION, describe_layout
 from .level_layout import LEVEL_LAYOUT, describe_level_layout
@@ -12,12 +13,14 @@ from .write import write, write_distilled
 
 __all__ = [
     "DISTILLED_LAYOUT",
+    "ESCAPE_LAYOUT",
     "LAYOUT_NAME",
     "LAYOUT_VERSION",
     "LEVEL_LAYOUT",
     "TABLE_LAYOUT",
     "WEIGHING_LAYOUT",
     "check_output",
+    "describe_escape_layout",
     "describe_layout",
     "describe_level_layout",
     "describe_table_layout",

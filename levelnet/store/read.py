@@ -9,7 +9,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 from ..atomic.levels import LevelSet
-from ..errors import FileFormatError, InputError, LevelnetError, Outcome
+from ..errors import FileFormatError, InputError, LevelnetError
 from ..history.line_figures import LineFigures
 from ..history.result import (
     Channels,
@@ -22,19 +22,23 @@ from ..history.result import (
 from ..history.setup import parse_setup
 from . import layout
 from .digest import content_digest, seal_fault
+from .escape_layout import ESCAPE_LAYOUT
 from .hdf5 import Damage, load
 from .level_layout import LEVEL_LAYOUT
-from .schema import Content, Group, Layout
+from .parts import all_fields, fields_of, outcome_of
+from .schema import Content, Layout
+from .study_makers import escape_study_of, level_study_of, weighing_of
 from .table_layout import DISTILLED_LAYOUT, TABLE_LAYOUT
 from .weighing_layout import WEIGHING_LAYOUT
 
 if TYPE_CHECKING:
     from ..distilled.fast import FastHistory
     from ..distilled.table import EffectiveTable
+    from ..studies.escape_records import EscapeStudy
     from ..studies.level_records import LevelStudy
     from ..studies.weighing import Weighing
 
-    Record = History | EffectiveTable | FastHistory | Weighing | LevelStudy
+    Record = History | EffectiveTable | FastHistory | Weighing | LevelStudy | EscapeStudy
 
 _HDF5_SIGNATURE = b"\x89HDF\r\n\x1a\n"
 
@@ -49,7 +53,7 @@ def read(path: str | Path) -> Record:
 
     Returns
     -------
-    History, EffectiveTable, FastHistory, Weighing or LevelStudy
+    History, EffectiveTable, FastHistory, Weighing, LevelStudy or EscapeStudy
         Equal to what was written, to the bit.
 
     Raises
@@ -135,7 +139,7 @@ def history_of(content: Content) -> History:
     parts: dict[str, Any] = {}
     populations = []
     for group in layout.groups_of(species, layout.FIELD.name in content.groups):
-        fields = _fields(content, group)
+        fields = fields_of(content, group)
         own = fields.pop("species", None)
         if own is not None:
             levels = LevelSet(**own.pop("levels"))
@@ -144,7 +148,7 @@ def history_of(content: Content) -> History:
     field = parts.pop("field", None)
     return History(
         setup=parse_setup(str(content.attributes["setup"]), "stored setup"),
-        outcome=_outcome(content),
+        outcome=outcome_of(content),
         species=tuple(populations),
         channels=Channels(**parts.pop("channels")),
         lines=LineFigures(**parts.pop("lines")),
@@ -155,30 +159,15 @@ def history_of(content: Content) -> History:
     )
 
 
-def _outcome(content: Content) -> Outcome:
-    outcome = str(content.attributes["outcome"])
-    if outcome not in Outcome.__members__:
-        raise FileFormatError(f'outcome "{outcome}" is not known to this levelnet')
-    return Outcome[outcome]
-
-
-def _all_fields(content: Content, kind: Layout) -> dict[str, Any]:
-    parts: dict[str, Any] = {}
-    for group in (*kind.required, *kind.optional):
-        if group.name in content.groups:
-            parts |= _fields(content, group)
-    return parts
-
-
 def distilled_of(content: Content) -> FastHistory:
     """Make the history that :func:`levelnet.store.write.write_distilled` took apart."""
     from ..distilled.fast import FastHistory
     from ..distilled.observables import Observables
 
-    parts = _all_fields(content, DISTILLED_LAYOUT)
+    parts = all_fields(content, DISTILLED_LAYOUT)
     seen, field = parts.pop("observables", None), parts.pop("field", None)
     return FastHistory(
-        outcome=_outcome(content),
+        outcome=outcome_of(content),
         observables=None if seen is None else Observables(**seen),
         field=None if field is None else RadiationField(**field),
         **parts,
@@ -191,7 +180,7 @@ def table_of(content: Content) -> EffectiveTable:
     from ..distilled.table import EffectiveTable
     from ..network.reduced import KeptLevels
 
-    parts = _all_fields(content, TABLE_LAYOUT)
+    parts = all_fields(content, TABLE_LAYOUT)
     kept = KeptLevels(**parts.pop("kept"))
     if parts["equilibrium"].shape[1] != len(kept):
         raise FileFormatError("levels: their number differs from that of the table")
@@ -204,82 +193,11 @@ def table_of(content: Content) -> EffectiveTable:
     )
 
 
-def weighing_of(content: Content) -> Weighing:
-    """Make the weighing that :func:`levelnet.store.write.content_of` took apart."""
-    from ..studies.budget_record import ErrorBudget
-    from ..studies.weighing import Weighing
-
-    parts = _all_fields(content, WEIGHING_LAYOUT)
-    levels = LevelSet(**parts.pop("levels"))
-    for name in ("upper", "lower", "line_upper"):
-        if len(parts[name]) and not 0 <= parts[name].min() <= parts[name].max() < len(levels):
-            raise FileFormatError(f"{name}: names levels that are not in the file")
-    budget = parts.pop("budget", None)
-    return Weighing(
-        setup=parse_setup(str(content.attributes["setup"]), "stored setup"),
-        outcome=_outcome(content),
-        levels=levels,
-        budget=None if budget is None else ErrorBudget(**budget),
-        **parts,
-    )
-
-
-def level_study_of(content: Content) -> LevelStudy:
-    """Make the study that :func:`levelnet.store.write.content_of` took apart."""
-    from ..studies.level_records import (
-        Estimate,
-        Estimates,
-        HeldOut,
-        LevelStudy,
-        Noise,
-        Question,
-        Rungs,
-    )
-
-    def estimates(given: dict[str, Any]) -> Estimates:
-        return Estimates(**{name: Estimate(**one) for name, one in given.items()})
-
-    parts = _all_fields(content, LEVEL_LAYOUT)
-    held, resolved = parts.pop("held_out", None), parts.pop("resolved", None)
-    question = parts.pop("question", None)
-    return LevelStudy(
-        setup=parse_setup(str(content.attributes["setup"]), "stored setup"),
-        outcome=_outcome(content),
-        rungs=Rungs(**parts.pop("rungs")),
-        limit=estimates(parts.pop("limit")),
-        noise=Noise(**parts.pop("noise")),
-        held_out=None if held is None else HeldOut(held["n_max"], estimates(held["foreseen"])),
-        resolved=None if resolved is None else Rungs(**resolved),
-        question=None if question is None else Question(**question),
-        **parts,
-    )
-
-
-def _fields(content: Content, group: Group) -> dict[str, Any]:
-    """Collect the fields of the records in one group: {"channels": {"names": ..., ...}, ...}."""
-    fields: dict[str, Any] = {}
-    for variable in group.variables:
-        stored: Any = content.variables[f"{group.name}/{variable.name}"].values
-        if variable is layout.REDSHIFT and not _same_redshift(content, stored):
-            raise FileFormatError(f"redshift of group {group.name} differs from that of history")
-        *outer, name = variable.field.split(".")
-        inner = fields
-        for key in outer:
-            inner = inner.setdefault(key, {})
-        inner[name] = stored if not hasattr(stored, "ndim") or stored.ndim else stored.item()
-    fields.pop("", None)  # the position of a level is no field
-    return fields
-
-
-def _same_redshift(content: Content, stored: Any) -> bool:
-    redshift: Any = content.variables[f"{layout.HISTORY.name}/redshift"].values
-    return bool(stored.tobytes() == redshift.tobytes())
-
-
 _MAKERS: dict[str, tuple[Layout, Callable[[Content], Record]]] = {
     layout.LAYOUT_NAME: (layout.HISTORY_LAYOUT, history_of),
     TABLE_LAYOUT.name: (TABLE_LAYOUT, table_of),
     DISTILLED_LAYOUT.name: (DISTILLED_LAYOUT, distilled_of),
     WEIGHING_LAYOUT.name: (WEIGHING_LAYOUT, weighing_of),
     LEVEL_LAYOUT.name: (LEVEL_LAYOUT, level_study_of),
+    ESCAPE_LAYOUT.name: (ESCAPE_LAYOUT, escape_study_of),
 }

@@ -52,7 +52,7 @@ class Group:
     @property
     def part(self) -> str:
         """Field of the record that an optional group holds."""
-        return self.variables[0].field.partition(".")[0]
+        return next(one.field for one in self.variables if "." in one.field).partition(".")[0]
 
     @property
     def attributes(self) -> dict[str, str]:

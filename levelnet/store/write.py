@@ -17,6 +17,7 @@ from ..history.result import History, SpeciesPopulations
 from ..history.setup import Setup
 from . import layout
 from .digest import content_digest, seal
+from .escape_layout import ESCAPE_LAYOUT
 from .level_layout import LEVEL_LAYOUT
 from .provenance import provenance
 from .schema import Content, Group, Layout, Stored, Variable, number_type
@@ -29,27 +30,26 @@ if TYPE_CHECKING:
 
     from ..distilled.fast import FastHistory
     from ..distilled.table import EffectiveTable
+    from ..studies.escape_records import EscapeStudy
     from ..studies.level_records import LevelStudy
     from ..studies.weighing import Weighing
 
-    Record = History | EffectiveTable | FastHistory | Weighing | LevelStudy
+    Storable = History | EffectiveTable | Weighing | LevelStudy | EscapeStudy
+    Record = Storable | FastHistory
 
 # Chunks of at most 64 redshifts x 2048 levels (1 MiB), the size of HDF5's chunk cache.
 _CHUNK = (64, 2048)
 _CHUNK_ONE_DIMENSION = 16384
 
 
-def write(
-    result: History | EffectiveTable | Weighing | LevelStudy, path: str | Path, force: bool = False
-) -> None:
-    """Write a history, a table of effective rates, a weighing or a study of levels as HDF5.
+def write(result: Storable, path: str | Path, force: bool = False) -> None:
+    """Write a history, a table of effective rates, a weighing or a study as HDF5.
 
     Parameters
     ----------
-    result : History, EffectiveTable, Weighing or LevelStudy
-        What to store, in the layout of :mod:`levelnet.store.layout`,
-        :mod:`levelnet.store.table_layout`, :mod:`levelnet.store.weighing_layout` or
-        :mod:`levelnet.store.level_layout`.
+    result : History, EffectiveTable, Weighing, LevelStudy or EscapeStudy
+        What to store, in the layout of :mod:`levelnet.store.layout`, or of the file beside it that
+        is named after the record.
     path : str or Path
         The file; it appears whole or not at all.
     force : bool
@@ -94,9 +94,10 @@ def write_distilled(
         seal(raw)
 
 
-def content_of(result: History | EffectiveTable | Weighing | LevelStudy) -> Content:
+def content_of(result: Storable) -> Content:
     """Everything a file says about a record, with the digest over all of it."""
     from ..distilled.table import EffectiveTable
+    from ..studies.escape_records import EscapeStudy
     from ..studies.level_records import LevelStudy
     from ..studies.weighing import Weighing
 
@@ -107,11 +108,13 @@ def content_of(result: History | EffectiveTable | Weighing | LevelStudy) -> Cont
     elif isinstance(result, Weighing):
         content = _content(WEIGHING_LAYOUT, result, result.setup)
     elif isinstance(result, LevelStudy):
-        content = _study_content(result)
+        content = _content(LEVEL_LAYOUT, result, result.setup)
+    elif isinstance(result, EscapeStudy):
+        content = _content(ESCAPE_LAYOUT, result, result.setup)
     else:
         raise InputError(
             f"write: a {type(result).__name__} cannot be stored; a History, an EffectiveTable, "
-            "a Weighing or a LevelStudy can"
+            "a Weighing, a LevelStudy or an EscapeStudy can"
         )
     content.attributes["digest"] = content_digest(content)
     return content
@@ -139,15 +142,6 @@ def _content(kind: Layout, record: Record, setup: Setup) -> Content:
     optional = [group for group in kind.optional if getattr(record, group.part) is not None]
     for group in (*kind.required, *optional):
         _add_group(content, group, record, None)
-    return content
-
-
-def _study_content(study: LevelStudy) -> Content:
-    content = Content(attributes=_root_attributes(LEVEL_LAYOUT, study.setup))
-    _add_outcome(content, study.outcome)
-    there = [one for one in LEVEL_LAYOUT.optional if getattr(study, one.name) is not None]
-    for group in (*LEVEL_LAYOUT.required, *there):
-        _add_group(content, group, study, None)
     return content
 
 

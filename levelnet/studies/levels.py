@@ -4,23 +4,22 @@ from __future__ import annotations
 
 import dataclasses
 import itertools
-from collections.abc import Callable, Iterable, Iterator, Sequence
-from concurrent.futures import BrokenExecutor, Executor, Future, as_completed
+from collections.abc import Iterable, Sequence
+from concurrent.futures import Executor
 from functools import partial
 
 import numpy as np
 
 from ..arrays import FloatArray
-from ..errors import InputError, Outcome, SolveError
+from ..errors import InputError, Outcome
 from ..history.cost import HIGHEST_N, check_memory, estimate
 from ..history.integrate import Progress, output_redshifts
 from ..history.setup import Setup
 from ..pieces import Pieces
 from .convergence import FEWEST_RUNGS, carry, check_rung_count
+from .jobs import run_jobs
 from .level_records import Estimate, Estimates, HeldOut, LevelStudy, Noise, Rungs
 from .rung import LOW_N, RungResult, compute_rung, rung_setup, study_setup
-
-Task = Callable[[Setup], RungResult]
 
 DEFAULT_COUNT = 7
 """Rungs of a ladder that is not given."""
@@ -114,7 +113,9 @@ def level_study(  # noqa: PLR0913  choices by name, each with a default
         pieces=pieces,
         optical_depth_to=tuple(optical_depth_to),
     )
-    results = _run([*jobs, *coarse], task, executor, progress)
+    every = [*jobs, *coarse]
+    costs = [estimate(one).seconds for one in every]
+    results = run_jobs(every, costs, task, executor, progress, "rungs")
     return _assemble(jobs, len(ladder), results, places)
 
 
@@ -164,41 +165,6 @@ def _population_redshifts(redshift: FloatArray) -> tuple[float, ...]:
     """A dozen output redshifts, evenly spread over the outputs."""
     chosen = np.linspace(0, len(redshift) - 1, min(_POPULATION_REDSHIFTS, len(redshift)))
     return tuple(redshift[np.unique(chosen.astype(int))].tolist())
-
-
-def _run(
-    jobs: list[Setup], task: Task, executor: Executor | None, progress: Progress | None
-) -> list[RungResult]:
-    """Results in the order of `jobs`, computed the longest first."""
-    tell = progress or (lambda stage, fraction: None)
-    costs = [estimate(job).seconds for job in jobs]
-    tell("rungs", 0.0)
-    found: dict[int, RungResult] = {}
-    order = sorted(range(len(jobs)), key=lambda k: -costs[k])
-    for k, result in _computed(jobs, order, task, executor):
-        found[k] = result
-        tell("rungs", sum(costs[j] for j in found) / sum(costs))
-    return [found[k] for k in range(len(jobs))]
-
-
-def _computed(
-    jobs: list[Setup], order: list[int], task: Task, executor: Executor | None
-) -> Iterator[tuple[int, RungResult]]:
-    if executor is None:
-        for k in order:
-            yield k, task(jobs[k])
-        return
-    futures: dict[Future[RungResult], int] = {}
-    try:
-        for k in order:
-            futures[executor.submit(task, jobs[k])] = k
-        for future in as_completed(futures):
-            yield futures[future], future.result()
-    except BrokenExecutor as error:
-        raise SolveError("a worker process died while it ran a rung; is memory short?") from error
-    finally:
-        for future in futures:
-            future.cancel()
 
 
 def _assemble(

@@ -136,8 +136,7 @@ def compute_rung(
         If the run ended before its last output.
     """
     with one_blas_thread():
-        ionized = ionized_redshift(setup.cosmology)  # observables start there
-        integrated = integrate_history(setup, lambda *_: None, pieces, start_above=ionized)
+        integrated = integrate_observed(setup, pieces)
         if not integrated.trajectory.outcome.ok:
             outcome = integrated.trajectory.outcome
             text = f"rung n_max = {setup.hydrogen.n_max}: {outcome.value}"
@@ -176,18 +175,26 @@ def observables_of(setup: Setup, pieces: Pieces | None = None) -> Observed:
         If the run ended before its last output.
     """
     with one_blas_thread():
-        start = ionized_redshift(setup.cosmology)
-        integrated = integrate_history(setup, lambda *_: None, pieces, start_above=start)
+        integrated = integrate_observed(setup, pieces)
         outcome = integrated.trajectory.outcome
         if not outcome.ok:
             raise SolveError(outcome.value, outcome=outcome)
         return observed(setup, integrated, ())
 
 
+def integrate_observed(
+    setup: Setup, pieces: Pieces | None, keeps: tuple[tuple[int, int], ...] = ()
+) -> Integrated:
+    """Integrate from where observables start, or know the network from there."""
+    start = ionized_redshift(setup.cosmology)
+    return integrate_history(setup, lambda *_: None, pieces, keeps=keeps, start_above=start)
+
+
 def observed(setup: Setup, integrated: Integrated, optical_depth_to: tuple[float, ...]) -> Observed:
-    """What an observer makes of the history; integrals start where the integration does."""
+    """What an observer makes of the history, in equilibrium above its start."""
     redshift = integrated.redshift
-    start = max(integrated.handover.redshift, float(redshift[0]))
+    ionized = ionized_redshift(setup.cosmology)
+    start = max(ionized, integrated.handover.redshift, float(redshift[0]))
     ends = -math.log1p(start), -math.log1p(float(redshift[-1]))
     grid = quadrature(setup.cosmology, *ends)
     electrons = electron_fraction_at(integrated, grid.points)

@@ -184,19 +184,19 @@ def _steady_law(x: float, strength: float) -> float:
 
 
 def test_recoil_against_its_integral() -> None:
-    """Closed form, within 1e-3 at the default step and nearer on finer grids.
+    """Closed form, at the default step and nearer on a finer grid.
 
-    Measured: -5.5e-4, -3.9e-4, -3.2e-4 at twice, once and half the default step. The law itself
-    takes h nu/kT and delta linear in ln nu, which is worth 2e-5.
+    The law takes h nu/kT and the distance from the line to be linear in ln nu, which is worth 2e-5;
+    the test of the order has it without.
     """
     errors = []
-    for width in (2.0 * DEFAULT_STEP, DEFAULT_STEP, 0.5 * DEFAULT_STEP):
+    for width in (2.0 * DEFAULT_STEP, DEFAULT_STEP):
         escape, _, (x, strength) = steady_escape(width)
         law = _steady_law(x, strength)
         assert 1.04 < law < 1.07
         errors.append(abs(escape / law - 1.0))
-    assert errors[1] < 1e-3
-    assert errors[2] < 0.9 * errors[1] < 0.9 * errors[0]
+    assert errors[1] < 1e-4
+    assert errors[1] < errors[0] < 1e-3
 
 
 @pytest.mark.parametrize("which", ["3s", "3d", "4s", "4d"])

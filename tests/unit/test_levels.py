@@ -197,7 +197,7 @@ class Dying(Executor):
 
 
 def test_dead_worker_is_one_line() -> None:
-    with pytest.raises(SolveError, match="a worker process died while it ran a rung"):
+    with pytest.raises(SolveError, match="a worker process died while it ran one of the rungs"):
         level_study(level_setup(), (4, 5, 6, 7), executor=Dying())
 
 

@@ -1,0 +1,47 @@
+"""From the content of a file to the fields of records."""
+
+from __future__ import annotations
+
+from typing import Any
+
+from ..errors import FileFormatError, Outcome
+from . import layout
+from .schema import Content, Group, Layout
+
+
+def outcome_of(content: Content) -> Outcome:
+    """How the run ended that a file is from; FileFormatError for a name that is not known."""
+    outcome = str(content.attributes["outcome"])
+    if outcome not in Outcome.__members__:
+        raise FileFormatError(f'outcome "{outcome}" is not known to this levelnet')
+    return Outcome[outcome]
+
+
+def all_fields(content: Content, kind: Layout) -> dict[str, Any]:
+    """Collect the fields of the records in all groups of a file of this kind."""
+    parts: dict[str, Any] = {}
+    for group in (*kind.required, *kind.optional):
+        if group.name in content.groups:
+            parts |= fields_of(content, group)
+    return parts
+
+
+def fields_of(content: Content, group: Group) -> dict[str, Any]:
+    """Collect the fields of the records in one group: {"channels": {"names": ..., ...}, ...}."""
+    fields: dict[str, Any] = {}
+    for variable in group.variables:
+        stored: Any = content.variables[f"{group.name}/{variable.name}"].values
+        if variable is layout.REDSHIFT and not _same_redshift(content, stored):
+            raise FileFormatError(f"redshift of group {group.name} differs from that of history")
+        *outer, name = variable.field.split(".")
+        inner = fields
+        for key in outer:
+            inner = inner.setdefault(key, {})
+        inner[name] = stored if not hasattr(stored, "ndim") or stored.ndim else stored.item()
+    fields.pop("", None)  # the position of a level is no field
+    return fields
+
+
+def _same_redshift(content: Content, stored: Any) -> bool:
+    redshift: Any = content.variables[f"{layout.HISTORY.name}/redshift"].values
+    return bool(stored.tobytes() == redshift.tobytes())

@@ -1,0 +1,180 @@
+"""What a study of the escape of line photons gives back."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+from ..arrays import FloatArray, IntArray, frozen_array
+from ..errors import Outcome
+from ..history.result import Channels, RadiationField
+from ..history.setup import Setup
+from .level_records import Question
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Variants:
+    """Histories that differ in their lines only; the variants are the first axis.
+
+    Attributes
+    ----------
+    name : tuple of str, length n_variants
+        What each is called.
+    lines : tuple of str, length n_variants
+        Its table [lines] as TOML.
+    outcome : tuple of str, length n_variants
+        Name of the Outcome of each.
+    switched_on : ndarray of int, shape (n_variants, n_switches)
+        1 for each switch that is on; 0 in treatments without a field.
+    free_electron_fraction : ndarray, shape (n_variants, n_redshift), dimensionless
+        n_e/n_H.
+    matter_temperature_k : ndarray, shape (n_variants, n_redshift), K
+        T_m.
+    observable : ndarray, shape (n_variants, n_observables)
+        Numbers that an observer sees, in their own units; NaN where the grid does not reach them.
+    cumulative_share : ndarray, shape (n_variants, n_channels), dimensionless
+        Each channel's part of all net recombinations down to the last redshift.
+    """
+
+    name: tuple[str, ...]
+    lines: tuple[str, ...]
+    outcome: tuple[str, ...]
+    switched_on: IntArray
+    free_electron_fraction: FloatArray
+    matter_temperature_k: FloatArray
+    observable: FloatArray
+    cumulative_share: FloatArray
+
+    def __post_init__(self) -> None:
+        """Check shapes and make every array read-only."""
+        count = len(self.name)
+        frozen_array(self, "switched_on", (count, *self.switched_on.shape[1:]), int)
+        for name in (
+            "free_electron_fraction",
+            "matter_temperature_k",
+            "observable",
+            "cumulative_share",
+        ):
+            frozen_array(self, name, (count, *getattr(self, name).shape[1:]))
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Switches:
+    """What is switched on and off in the reference; arrays have shape (n_switches,).
+
+    Attributes
+    ----------
+    name : tuple of str
+        In the order in which they are added.
+    base : int
+        Position, among the variants, of the reference with every switch off.
+    alone : ndarray of int
+        Positions of the base with one switch on (and what it needs).
+    removed : ndarray of int
+        Positions of the reference with one switch off (and what needs it).
+    cumulative : ndarray of int
+        Positions of the base with this and all switches before it; the last is the reference.
+    """
+
+    name: tuple[str, ...]
+    base: int
+    alone: IntArray
+    removed: IntArray
+    cumulative: IntArray
+
+    def __post_init__(self) -> None:
+        """Check shapes and make every array read-only."""
+        for name in ("alone", "removed", "cumulative"):
+            frozen_array(self, name, (len(self.name),), int)
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class NumericalError:
+    """Relative numerical errors of the reference, never negative.
+
+    Attributes
+    ----------
+    free_electron_fraction, matter_temperature_k : ndarray, shape (n_redshift,), dimensionless
+        What its frequency step and its tolerance leave.
+    observable : ndarray, shape (n_observables,), dimensionless
+        The same; NaN where the grid does not reach the event.
+    """
+
+    free_electron_fraction: FloatArray
+    matter_temperature_k: FloatArray
+    observable: FloatArray
+
+    def __post_init__(self) -> None:
+        """Make the arrays read-only."""
+        for name in ("free_electron_fraction", "matter_temperature_k", "observable"):
+            frozen_array(self, name, getattr(self, name).shape)
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class EscapeStudy:
+    """How far each treatment of the line photons is from the field resolved in frequency.
+
+    Attributes
+    ----------
+    setup : Setup
+        The setup of the reference.
+    outcome : Outcome
+        How the reference ended; that of each variant stands in `variants`.
+    redshift : ndarray, shape (n_redshift,), dimensionless
+        Descending.
+    observable_names, observable_units : tuple of str, length n_observables
+        "1" stands for no unit.
+    variants : Variants
+        All histories.
+    treatments : ndarray of int, shape (n_treatments,)
+        Positions of the treatments without a field, from the simplest on.
+    reference : int
+        Position of the reference.
+    switches : Switches
+        What is switched on and off in it.
+    reference_error : NumericalError
+        What numerics leave in the reference.
+    channels : Channels
+        How atoms reached the ground state in the reference.
+    field : RadiationField or None
+        The field of the reference, if it resolves one.
+    question : Question or None
+        What the study was asked, if it was.
+    """
+
+    setup: Setup
+    outcome: Outcome
+    redshift: FloatArray
+    observable_names: tuple[str, ...]
+    observable_units: tuple[str, ...]
+    variants: Variants
+    treatments: IntArray
+    reference: int
+    switches: Switches
+    reference_error: NumericalError
+    channels: Channels
+    field: RadiationField | None = None
+    question: Question | None = None
+
+    def __post_init__(self) -> None:
+        """Check shapes and make every array read-only."""
+        count, n_variants = len(self.redshift), len(self.variants.name)
+        frozen_array(self, "redshift", (count,))
+        frozen_array(self, "treatments", (len(self.treatments),), int)
+        named = [self.reference, self.switches.base, *self.treatments.tolist()]
+        for places in (self.switches.alone, self.switches.removed, self.switches.cumulative):
+            named += places.tolist()
+        if not all(0 <= one < n_variants for one in named):
+            raise ValueError(f"positions of variants must be 0 to {n_variants - 1}")
+        if self.variants.free_electron_fraction.shape[1] != count:
+            raise ValueError(f"variants: {count} redshifts are needed")
+
+    @property
+    def notes(self) -> tuple[str, ...]:
+        """What a user must know before relying on the result."""
+        from .escape_notes import escape_notes
+
+        return escape_notes(self)
+
+    def __repr__(self) -> str:
+        """One line: how many variants, and the outcome."""
+        return f"<EscapeStudy of {len(self.variants.name)} variants: {self.outcome.value}>"
