@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from dataclasses import replace
 from functools import lru_cache
 from pathlib import Path
@@ -9,7 +10,7 @@ from typing import Any
 
 import numpy as np
 import pytest
-from scipy.interpolate import CubicSpline
+from scipy.interpolate import CubicSpline, RectBivariateSpline
 
 from levelnet import constants as const
 from levelnet import read, solve, with_expansion, write
@@ -78,8 +79,8 @@ def test_everything_survives_the_file(tmp_path: Path) -> None:
 def test_spectrum_is_thermal_in_lyman_alpha() -> None:
     """A thick line fills its red side to its own source function (Sobolev 1960, from memory).
 
-    So ln u = ln[x_2p g_1s/(x_1s g_2p)] + E/kT_r right below the line. Spectra stand at the end of a
-    step, the line was left in its middle.
+    So ln u = ln[x_2p g_1s/(x_1s g_2p)] + E/kT_r in the line. Spectra stand at the end of a step,
+    the line was left in its middle.
     """
     history = field_history()
     field, levels = history.field, history.levels("H I")
@@ -93,21 +94,31 @@ def test_spectrum_is_thermal_in_lyman_alpha() -> None:
     growth = np.log1p(history.redshift)
     step = history.diagnostics.frequency_step
     expected = CubicSpline(growth[::-1], source[::-1])(np.log1p(field.redshift) + 0.5 * step)
-    below = int(np.searchsorted(field.photon_energy_ev, energy_ev)) - 1
+    line = int(np.argmin(np.abs(field.photon_energy_ev - energy_ev)))
     inside = (field.redshift < 1650.0) & (field.redshift > 300.0)
-    found = field.log_distortion[inside, below]
+    found = field.log_distortion[inside, line]
     assert expected[inside].max() > 1.0
     # What remains is the interpolation between outputs 9 per cent apart, worst at the start.
     np.testing.assert_allclose(found, expected[inside], rtol=1e-4, atol=2e-3)
 
 
-def test_field_above_the_lines_is_a_blackbody_and_below_lyman_alpha_it_is_brighter() -> None:
-    field = field_history().field
+def test_photons_that_left_lyman_alpha_are_still_there() -> None:
+    """Expansion moves photon energies and k T_r alike, so that u travels unchanged.
+
+    With nothing between the lines: u of the line at z = 1200 stands at z = 999.8 at 5/6 of its
+    energy (closed form).
+    """
+    field = changed(lines=field_setup().lines, end=300.0).field
     assert field is not None
-    at = int(np.argmin(np.abs(field.redshift - 1000.0)))
-    assert field.log_distortion[at, -1] == 0.0
-    red = np.searchsorted(field.photon_energy_ev, 10.15)
-    assert field.log_distortion[at, red] > 0.1
+    places = np.log(field.photon_energy_ev)
+    surface = RectBivariateSpline(
+        np.log1p(field.redshift[::-1]), places, field.log_distortion[::-1], kx=3, ky=1
+    )
+    line = float(places[np.argmin(np.abs(field.photon_energy_ev - 10.1988))])  # Lyman-alpha
+    emitted = float(surface(math.log(1201.0), line)[0, 0])
+    seen = float(surface(math.log(1201.0 * 5.0 / 6.0), line + math.log(5.0 / 6.0))[0, 0])
+    assert emitted > 2.0
+    assert seen == pytest.approx(emitted, abs=0.01)
 
 
 @pytest.mark.parametrize("two_photon", ["spontaneous", "stimulated"])
