@@ -19,6 +19,7 @@ if TYPE_CHECKING:
 
 _MOST_CURVES = len(style.DASHES)
 _CURVES = 5
+_EARLIEST, _LATEST = 1500.0, 700.0  # redshifts of the curves where none are asked for
 _WINGS = 0.01  # half the width over frequency of the close view
 _NAMES = (r"Ly $\alpha$", r"$\beta$", r"$\gamma$", r"$\delta$")
 _LINES_MARKED = 8  # from there on the lines stand closer than the strokes that mark them
@@ -37,9 +38,9 @@ def spectrum_figure(history: History, redshifts: Sequence[float] | None = None) 
     Returns
     -------
     matplotlib Figure
-        log10 of u, the occupation number over that of the blackbody (dimensionless). Left: against
-        photon energy in eV, the Lyman lines marked. Right: against the relative distance from
-        Lyman-alpha in frequency, to +-0.01.
+        u is the occupation number over that of the blackbody (dimensionless). Left: log10 u against
+        photon energy in eV, the Lyman lines marked. Right: u over that in Lyman-alpha against the
+        relative distance from it in frequency, to +-0.01.
 
     Raises
     ------
@@ -73,7 +74,7 @@ def field_figure(
         _mark_lines(left, lines_ev, limit_ev)
         draw_spectrum(right, field, redshifts, around_ev=float(lines_ev[0]))
         right.set_xlabel(r"$(\nu - \nu_\alpha) / \nu_\alpha$")
-        right.set_ylabel("")
+        right.set_ylabel(r"distortion over that in Ly $\alpha$")
         style.panel_letter(left, "a")
         style.panel_letter(right, "b")
         # Outside, since spectra fill either panel.
@@ -88,7 +89,9 @@ def draw_spectrum(
     around_ev: float | None = None,
     half_width: float = _WINGS,
 ) -> None:
-    """Draw log10 of the distortion u of a field at some redshifts, one labelled curve each.
+    """Draw the distortion u of a field at some redshifts, one labelled curve each.
+
+    Over the whole field it is log10 u; around one photon energy, u over its value there.
 
     Parameters
     ----------
@@ -97,7 +100,8 @@ def draw_spectrum(
     field : RadiationField
         What to draw.
     redshifts : sequence of float or None, dimensionless
-        One to seven; the nearest spectra are drawn, each once. None spreads five over them.
+        One to seven; the nearest spectra are drawn, each once. None spreads five over those from
+        z = 1500 to 700, while hydrogen recombines, or over all if fewer than two lie there.
     around_ev : float or None, eV
         A photon energy within the field: the axis is the relative distance from it in frequency.
         None: the axis is photon energy, over the whole field.
@@ -115,21 +119,26 @@ def draw_spectrum(
     first = max(int(np.searchsorted(place, limits[0], "right")) - 1, 0)
     shown = slice(first, int(np.searchsorted(place, limits[1], "left")) + 1)
     for k, row in enumerate(rows):
+        values = field.log_distortion[row, shown] / np.log(10.0)
+        if around_ev is not None:
+            middle = field.log_distortion[row, int(np.argmin(np.abs(place)))]
+            values = np.exp(field.log_distortion[row, shown] - middle)
         axes.plot(
             place[shown],
-            field.log_distortion[row, shown] / np.log(10.0),
+            values,
             color=style.SERIES[k],
             linestyle=style.DASHES[k],
             linewidth=1.1,
             label=f"$z$ = {field.redshift[row]:.4g}",
         )
     axes.axhline(0.0, color=style.GREY, linewidth=0.5, zorder=0)
+    axes.set_ylabel(r"distortion of the field, $\log_{10} u$")
     if around_ev is not None:
+        axes.set_ylabel("distortion over that in the middle")
         axes.axvline(0.0, color=style.GREY, linewidth=0.8, linestyle=":", zorder=0)
         axes.locator_params(axis="x", nbins=5)  # more of these long numbers would touch
     axes.set_xlim(*limits)
     axes.set_xlabel("photon energy (eV)" if around_ev is None else r"$(\nu - \nu_0) / \nu_0$")
-    axes.set_ylabel(r"distortion of the field, $\log_{10} u$")
 
 
 def _rows(field: RadiationField, redshifts: Sequence[float] | None) -> list[int]:
@@ -138,7 +147,9 @@ def _rows(field: RadiationField, redshifts: Sequence[float] | None) -> list[int]
     if not count:
         raise InputError("spectrum: the field holds no spectra")
     if redshifts is None:
-        return sorted(set(np.linspace(0, count - 1, _CURVES).round().astype(int).tolist()))
+        inside = np.flatnonzero((field.redshift <= _EARLIEST) & (field.redshift >= _LATEST))
+        first, last = (inside[0], inside[-1]) if len(inside) > 1 else (0, count - 1)
+        return sorted(set(np.linspace(first, last, _CURVES).round().astype(int).tolist()))
     if not 1 <= len(redshifts) <= _MOST_CURVES:
         raise InputError(f"redshifts: {len(redshifts)} given, allowed are 1 to {_MOST_CURVES}")
     high, low = float(field.redshift[0]), float(field.redshift[-1])
