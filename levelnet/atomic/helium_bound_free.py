@@ -16,7 +16,7 @@ from ..arrays import FloatArray, frozen_array
 from ..errors import RangeError
 from ..tables import read_table
 from .bound_free import bound_free
-from .coulomb_functions import INNER_CUT, RadialGrid, bound_functions, free_function, radial_grid
+from .coulomb_functions import RadialGrid, bound_functions, free_function, radial_grid
 from .detailed_balance import photoionization_from_recombination, thermal_volume_cm3
 from .electron_grid import COLDEST_K, HOTTEST_K, ElectronGrid, electron_grid
 from .helium_levels import HeliumLevels, quantum_defect
@@ -258,17 +258,17 @@ def _squared_integrals(
     levels: HeliumLevels, spin: int, bound: list[FloatArray], energy: float, grid: RadialGrid
 ) -> list[FloatArray]:
     # Sum over l' of l_> / (2l+1) <r>^2 for each l, shape (n_states,).
-    r = grid.nodes.ravel()
+    weight = (grid.nodes * grid.weights).ravel()
     free = []
     for l in range(len(bound) + 1):
         defect = 0.0 if levels.nuclear_charge == 1 else float(quantum_defect(l, spin, energy))
-        free.append(free_function(energy, l, defect, grid))
+        free.append(weight * free_function(energy, l, defect, grid))
     total = []
     for l, functions in enumerate(bound):
-        up = functions @ (free[l + 1] * r * grid.rule_from(INNER_CUT[l]))
+        up = functions @ free[l + 1]
         squared = (l + 1.0) / (2.0 * l + 1.0) * up**2
         if l > 0:
-            down = functions @ (free[l - 1] * r * grid.rule_from(INNER_CUT[l - 1]))
+            down = functions @ free[l - 1]
             squared = squared + l / (2.0 * l + 1.0) * down**2
         total.append(squared)
     return total

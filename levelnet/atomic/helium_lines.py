@@ -15,7 +15,7 @@ from .. import constants as const
 from ..arrays import FloatArray, IntArray
 from ..errors import InputError
 from .bound_bound import DipoleBlocks, dipole_blocks, strength_scale, transition_frequency
-from .coulomb_functions import INNER_CUT, bound_functions, radial_grid
+from .coulomb_functions import bound_functions, radial_grid
 from .helium_ground import published_rates_per_s, resonance_rates_per_s
 from .helium_levels import SERIES_L, HeliumLevels, term_numbers
 from .levels import reduced_mass_ratio
@@ -135,11 +135,8 @@ def _low_integrals(levels: HeliumLevels, spin: int) -> list[FloatArray]:
     nu = levels.effective_n
     grid = radial_grid(float(nu.max()))
     functions = [bound_functions(nu[levels.series(l, spin)], l, grid) for l in range(highest + 1)]
-    r = grid.nodes.ravel()
-    return [
-        ((functions[l] * (r * grid.rule_from(INNER_CUT[l]))) @ functions[l + 1].T) ** 2
-        for l in range(highest)
-    ]
+    weight = (grid.nodes * grid.weights).ravel()
+    return [((functions[l] * weight) @ functions[l + 1].T) ** 2 for l in range(highest)]
 
 
 def _hydrogenic_integrals(
