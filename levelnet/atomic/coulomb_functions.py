@@ -9,9 +9,10 @@ that is not, y.
 from __future__ import annotations
 
 from dataclasses import dataclass
+from math import factorial
 
 import numpy as np
-from scipy.special import factorial, psi
+from scipy.special import psi
 
 from ..arrays import FloatArray
 from ..kernels import coulomb
@@ -222,21 +223,8 @@ def _near_nucleus(
 
 
 def _power_series(kappa: FloatArray, l: int) -> tuple[FloatArray, FloatArray]:
-    a = np.zeros((_POWERS + 1, len(kappa)))
-    b = np.zeros_like(a)
-    a[0] = b[0] = 1.0
-    for k in range(1, _POWERS + 1):
-        a[k] = (kappa * a[k - 2] if k > 1 else 0.0) - 2.0 * a[k - 1]
-        a[k] /= k * (k + 2.0 * l + 1.0)
-    for k in range(1, _POWERS + 1):
-        value = (kappa * b[k - 2] if k > 1 else 0.0) - 2.0 * b[k - 1]
-        source = k - 2 * l - 1
-        if source == 0:
-            b[:k] *= (2.0 * l + 1.0) / value
-            continue
-        if source > 0:
-            value = value - (2.0 * (source + l) + 1.0) * a[source]
-        b[k] = value / (k * (k - 2.0 * l - 1.0))
+    a, b = np.empty((2, _POWERS + 1, len(kappa)))
+    coulomb.power_series(kappa, l, a, b)
     return a, b
 
 

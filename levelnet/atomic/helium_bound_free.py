@@ -27,11 +27,12 @@ ION_WEIGHT = 2.0
 """Statistical weight of He+ in its ground state."""
 
 _DIRECT_L = 2
-# Highest n computed directly; above it, the ratio to hydrogen is that at this n. For fast electrons
-# the ratio settles sooner, at n = 10/k, and the integrals cost more.
-_DIRECT_N = 30
-_DIRECT_N_LEAST = 6
-_DIRECT_NK = 10.0
+# Highest n computed directly; above it, the ratio to hydrogen is that at this n. All of _DIRECT_N
+# share one radial grid for electrons with n k up to _SLOW_NK; faster ones need grids of their own,
+# and for them the ratio settles at n = 10/k.
+_DIRECT_N = (100, 70, 50)
+_SLOW_NK = 0.8
+_FAST_N, _FAST_NK, _LEAST_N = 30, 10.0, 6
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -228,7 +229,7 @@ def _ratios(
         if top not in slow:
             slow[top] = _on_grid(nu, direct, 0.0)
         radial, bound = slow[top]
-        if k * k * radial.edges[-1] > 2.0:  # faster than the Coulomb field makes it
+        if k * k * radial.edges[-1] > 2.0:  # faster than the field alone makes it
             radial, bound = _on_grid(nu, direct, float(k))
         squares = _squared_integrals(levels, spin, bound, float(energy), radial)
         for l, one in enumerate(series):
@@ -243,7 +244,10 @@ def _ratios(
 
 
 def _highest_direct(k: float, n_max: int) -> int:
-    return int(min(n_max, _DIRECT_N, max(_DIRECT_N_LEAST, _DIRECT_NK / k)))
+    for n in _DIRECT_N:
+        if n * k <= _SLOW_NK:
+            return min(n, n_max)
+    return int(min(n_max, _FAST_N, max(_LEAST_N, _FAST_NK / k)))
 
 
 def _on_grid(

@@ -94,3 +94,41 @@ def follow(
         t = edges[edge + step] - edges[edge]
         state[0], state[1] = _value(series, t), _slope(series, t)
         trace[edge + step, 0], trace[edge + step, 1] = state[0], state[1]
+
+
+@kernel
+def power_series(kappa: FloatArray, l: int, a: FloatArray, b: FloatArray) -> None:
+    """Coefficients of f and of what y has beside the logarithm, about the nucleus.
+
+    f = r^(l+1) sum of a_k r^k, y = f ln r + r^(-l) sum of b_k r^k with b_(2l+1) = 0.
+
+    Parameters
+    ----------
+    kappa : ndarray, shape (n_states,)
+        Minus twice the energies.
+    l : int
+        Angular momentum.
+    a, b : ndarray, shape (n_powers, n_states)
+        Coefficients, written; n_powers above 2l + 1.
+    """
+    log_power = 2 * l + 1
+    for i in range(len(kappa)):
+        a[0, i], b[0, i] = 1.0, 1.0
+        for k in range(1, len(a)):
+            value = -2.0 * a[k - 1, i]
+            if k > 1:
+                value += kappa[i] * a[k - 2, i]
+            a[k, i] = value / (k * (k + log_power))
+        for k in range(1, len(b)):
+            value = -2.0 * b[k - 1, i]
+            if k > 1:
+                value += kappa[i] * b[k - 2, i]
+            if k == log_power:
+                # The equation of this power fixes the scale of all before it.
+                for j in range(k):
+                    b[j, i] *= log_power / value
+                b[k, i] = 0.0
+            else:
+                if k > log_power:
+                    value -= (2.0 * (k - l) - 1.0) * a[k - log_power, i]
+                b[k, i] = value / (k * (k - log_power))
