@@ -17,8 +17,9 @@ from scipy.special import psi
 from ..arrays import FloatArray
 from ..kernels import coulomb
 
-CORE_RADIUS = (0.0, 0.05, 0.2, 0.2)
-"""For l = 0 to 3, the radius in Bohr radii inside which only the regular part f is kept.
+CORE_RADIUS = (0.0, 0.05, 0.22, 0.22)
+"""For l = 0 to 3, the radius in Bohr radii inside which only the regular part f is kept (whole
+panels: the last edge inside counts).
 
 The functions are those outside the core. Continued to the nucleus, the tiny part y of the higher l
 rises as r^(-l), and means nothing there: it would add 1 to 4 per cent to lines between d and f.
@@ -53,7 +54,7 @@ class RadialGrid:
     weights: FloatArray
 
     def count_inside(self, radius: float) -> int:
-        """Count the panels inside a radius; one that ends there but for rounding counts."""
+        """Count the panels that end inside a radius, or on it but for rounding."""
         return int(np.searchsorted(self.edges[1:], radius * (1.0 + 1e-9), side="right"))
 
 
@@ -105,7 +106,7 @@ def bound_functions(effective_n: FloatArray, l: int, grid: RadialGrid) -> FloatA
     match = int(np.searchsorted(grid.edges, _MATCH_AT))
     kappa = effective_n**-2.0
     regular, irregular = _bound_parts(effective_n, l)
-    f, y = _near_nucleus(kappa, effective_n.astype(complex), l, grid.edges[match])
+    f, y = _near_nucleus(kappa, l, grid.edges[match])
     value, slope = regular * f + irregular * y
     functions = np.zeros((len(effective_n), *grid.nodes.shape))
     trace = np.zeros((len(grid.edges), 2))
@@ -148,7 +149,7 @@ def free_function(k_squared: float, l: int, defect: float, grid: RadialGrid) -> 
     kappa, k = np.array([-k_squared]), np.sqrt(k_squared)
     # From the middle both ways: inside the barrier f dies inwards and y outwards.
     start = int(np.searchsorted(grid.edges, min(_MATCH_AT, _PHASE_AT_START / k)))
-    f, y = _near_nucleus(kappa, 1j / np.array([k]), l, grid.edges[start])
+    f, y = _near_nucleus(kappa, l, grid.edges[start])
     opening = np.sqrt(-np.expm1(-2.0 * np.pi / k))
     shift = np.pi * defect
     regular = _norm(kappa, l) * np.cos(shift) / opening
@@ -173,7 +174,8 @@ def _decay_action(r: float | FloatArray, nu: float) -> FloatArray:
 def _decaying(kappa: float, l: int, r: float) -> FloatArray:
     # Any small start serves: what is not the decaying solution dies out inwards.
     square = l * (l + 1.0) / r**2 - 2.0 / r + kappa
-    return np.array([1.0, -np.sqrt(square)]) * np.exp(-_DECAY)
+    start: FloatArray = np.array([1.0, -np.sqrt(square)]) * np.exp(-_DECAY)
+    return start
 
 
 def _bound_parts(nu: FloatArray, l: int) -> tuple[FloatArray, FloatArray]:
@@ -201,14 +203,12 @@ def _norm(kappa: FloatArray, l: int) -> FloatArray:
     return norm
 
 
-def _near_nucleus(
-    kappa: FloatArray, nu: FloatArray, l: int, r: float
-) -> tuple[FloatArray, FloatArray]:
+def _near_nucleus(kappa: FloatArray, l: int, r: float) -> tuple[FloatArray, FloatArray]:
     """Value and slope, shape (2, n), of f and of y/pi at r, by their power series.
 
     f = r^(l+1) (1 + ...) is regular, y = f (ln r + B) + r^(-l) sum of b_k r^k with b_(2l+1) = 0;
     that W is a combination of both by cos and sin of pi nu fixes B (from the logarithmic case of
-    Tricomi's function, DLMF 13.2.9). `nu` is complex: i/k above the threshold.
+    Tricomi's function, DLMF 13.2.9).
     """
     a, b = _power_series(kappa, l)
     k = np.arange(_POWERS + 1)
@@ -217,7 +217,7 @@ def _near_nucleus(
     regular = r ** (k + l + 1.0)
     regular_slope = (k + l + 1.0) * r ** (k + float(l))
     f = np.array([regular @ a, regular_slope @ a])
-    logarithm = np.log(r) + _logarithmic_constant(nu, l)
+    logarithm = np.log(r) + _logarithmic_constant(kappa, l)
     y = np.array([f[0] * logarithm + power @ b, f[1] * logarithm + f[0] / r + power_slope @ b])
     return f, y / np.pi
 
@@ -228,9 +228,10 @@ def _power_series(kappa: FloatArray, l: int) -> tuple[FloatArray, FloatArray]:
     return a, b
 
 
-def _logarithmic_constant(nu: FloatArray, l: int) -> FloatArray:
-    # Real also for imaginary nu: everything in it is even in nu but for parts that cancel.
+def _logarithmic_constant(kappa: FloatArray, l: int) -> FloatArray:
+    # Even in nu but for parts that cancel; for imaginary nu, above the threshold, its real part.
     n = 2 * l + 1
+    nu = 1.0 / np.sqrt(kappa.astype(np.complex128))
     total = np.zeros_like(nu)
     for k in range(1, n + 1):
         term = factorial(k - 1) / factorial(n - k) * (-0.5) ** k / factorial(k)
@@ -241,7 +242,6 @@ def _logarithmic_constant(nu: FloatArray, l: int) -> FloatArray:
     denominator = np.ones_like(nu)
     for j in range(n):
         denominator = denominator * (j - l - nu)
-    constant = np.log(2.0 / nu) + psi(nu - l) - psi(1.0) - psi(n + 1.0)
-    constant = constant + factorial(n) * total / denominator
-    constant_real: FloatArray = constant.real
-    return constant_real
+    constant = np.log(2.0 / nu) + psi(nu - l) + factorial(n) * total / denominator
+    real: FloatArray = np.real(constant) - psi(1.0) - psi(n + 1.0)
+    return real

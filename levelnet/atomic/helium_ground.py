@@ -82,6 +82,7 @@ def ground_lines(
             f"intercombination_rate_per_s = {intercombination_rate_per_s:g}: must be 0 or above"
         )
     published = published_rates_per_s()
+    resonance_rates = resonance_rates_per_s(levels)
     resonance = levels.series(1, 0)
     structure = read_table("helium/fine_structure")
     fine = dict(
@@ -99,9 +100,7 @@ def ground_lines(
         weight,
         weight / levels.statistical_weight[level],
         np.append(levels.energy_ev[resonance], forbidden_ev),
-        np.concatenate(
-            [resonance_rates_per_s(levels), [intercombination_rate_per_s], forbidden]
-        ),
+        np.concatenate([resonance_rates, [intercombination_rate_per_s], forbidden]),
     )
 
 
@@ -125,12 +124,13 @@ def resonance_rates_per_s(levels: HeliumLevels) -> FloatArray:
     ----------
     NIST Atomic Spectra Database; Seaton 1983, Rep. Prog. Phys. 46, 167 (smoothness in energy).
     """
+    if levels.nuclear_charge != 2:
+        raise InputError("resonance lines of helium: asked of levels in the hydrogenic limit")
     p = levels.series(1, 0)
     published = published_rates_per_s()
     known = {term_numbers(up)[0]: a for (up, low), a in published.items() if low == GROUND}
     n, nu = levels.n[p], levels.effective_n[p]
     scale = nu**3 / levels.energy_ev[p] ** 3
-    # The three lines are needed whatever n_max is; their levels are the same for every n_max.
     rates = np.array([known.get(int(one), 0.0) for one in n])
     if levels.n_max > max(known):
         given = rates > 0.0

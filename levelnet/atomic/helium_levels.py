@@ -109,7 +109,7 @@ class HeliumLevels:
             )
         return int(found[0])
 
-    def series(self, l: int, spin: int) -> slice | IntArray:
+    def series(self, l: int, spin: int) -> IntArray:
         """Positions of the levels of one l and spin, by ascending n."""
         return np.flatnonzero((self.l == l) & (self.spin == spin))
 
@@ -213,7 +213,10 @@ def _series_binding_ev(n: int, l: int, spin: int) -> float:
 @functools.cache
 def _series() -> dict[tuple[int, int], tuple[float, float, float]]:
     numbers = read_table("helium/quantum_defects").numbers
-    rows = zip(*(np.nan_to_num(numbers[name]) for name in ("l", "spin", "d0", "d2", "d4")))
+    rows = zip(
+        *(np.nan_to_num(numbers[name]).tolist() for name in ("l", "spin", "d0", "d2", "d4")),
+        strict=True,
+    )
     return {(int(l), int(spin)): (d0, d2, d4) for l, spin, d0, d2, d4 in rows}
 
 

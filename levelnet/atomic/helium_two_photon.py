@@ -130,8 +130,7 @@ def _strengths() -> FloatArray:
     # All values have the same number of decimals: the same absolute error.
     accuracy = 2.0 * published / amplitude
     found = np.linalg.lstsq(_poles(w) * accuracy[:, None], amplitude * accuracy, rcond=None)
-    strengths: FloatArray = found[0]
-    return strengths
+    return np.asarray(found[0], float)
 
 
 @functools.cache

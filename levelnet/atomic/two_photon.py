@@ -178,9 +178,7 @@ def _photon_ratio(temperature_k: float | FloatArray, transition_energy_ev: float
     return transition_energy_ev / (const.BOLTZMANN_EV_K * temperature)
 
 
-def _stimulation_integrals(
-    ratio: FloatArray, profile: Profile
-) -> tuple[FloatArray, FloatArray]:
+def _stimulation_integrals(ratio: FloatArray, profile: Profile) -> tuple[FloatArray, FloatArray]:
     """Return int phi f dy and its derivative by ln T, for each u = h nu_21/kT.
 
     In t = u y the occupation varies on a scale of 1 whatever the temperature, and phi/y is smooth;
