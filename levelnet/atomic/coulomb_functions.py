@@ -23,7 +23,7 @@ panels: the last edge inside counts).
 
 The functions are those outside the core. Continued to the nucleus, the tiny part y of the higher l
 rises as r^(-l), and means nothing there: it would add 1 to 4 per cent to lines between d and f.
-Twice the radius changes those by 0.1 per cent.
+Twice the radius changes those by up to 0.3 per cent, other lines by 0.1.
 """
 
 _NODES_PER_PANEL = 10

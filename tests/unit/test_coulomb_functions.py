@@ -101,7 +101,7 @@ def test_free_functions_join_bessel_functions_at_the_threshold() -> None:
 
 
 def test_bound_and_free_functions_are_one_function_of_energy() -> None:
-    # nu^(3/2) u of a bound level and the free function, both towards the threshold, with one defect.
+    # nu^(3/2) u of a bound level and the free function, both near the threshold, with one defect.
     grid = radial_grid(100.0)
     near = grid.nodes.ravel() < 5.0
     for l, defect in ((0, 0.3), (1, 0.07), (2, 0.003)):
