@@ -14,6 +14,7 @@ import pytest
 
 import levelnet
 from levelnet.cli.main import build_parser
+from levelnet.escape.lines import Transfer
 from levelnet.history.setup import Setup, parse_setup
 from levelnet.store import (
     DISTILLED_LAYOUT,
@@ -100,11 +101,24 @@ def test_every_key_of_the_setup_is_explained(part: str, field: dataclasses.Field
     elif field.name == "helium_mass_fraction":
         # None stands for a value that depends on another key.
         assert cells[1] == "`0.245`"
+    elif (part, field.name) == ("lines", "two_photon"):
+        assert cells[1] == '`"spontaneous"`'
     elif field.default is None:
         assert cells[1] == "not set"
     else:
         value = tomllib.loads(f"x = {cells[1].strip('`')}")["x"]
         assert (tuple(value) if isinstance(value, list) else value) == field.default
+
+
+@pytest.mark.parametrize("field", dataclasses.fields(Transfer), ids=lambda field: field.name)
+def test_every_key_of_the_transfer_table_is_explained(field: dataclasses.Field) -> None:
+    rows = rows_of("lines.transfer")
+    assert set(rows) == {one.name for one in dataclasses.fields(Transfer)}
+    found = rows[field.name][1]
+    if field.default is None:
+        assert found == "not set"
+    else:
+        assert tomllib.loads(f"x = {found.strip('`')}")["x"] == field.default
 
 
 @pytest.mark.parametrize("part", PARTS)

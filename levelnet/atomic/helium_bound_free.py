@@ -12,7 +12,7 @@ import numpy as np
 from numpy.typing import ArrayLike
 
 from .. import constants as const
-from ..arrays import FloatArray, frozen_array
+from ..arrays import BoolArray, FloatArray, frozen_array
 from ..errors import RangeError
 from ..tables import read_table
 from .bound_free import bound_free
@@ -20,6 +20,7 @@ from .coulomb_functions import RadialGrid, bound_functions, free_function, radia
 from .detailed_balance import photoionization_from_recombination, thermal_volume_cm3
 from .electron_grid import COLDEST_K, HOTTEST_K, ElectronGrid, electron_grid
 from .helium_levels import HeliumLevels, quantum_defect
+from .helium_lines import channel_factors
 from .levels import reduced_mass_ratio
 from .radiation import planck_occupation
 
@@ -75,7 +76,10 @@ def helium_bound_free(levels: HeliumLevels) -> HeliumBoundFree:
         defect continued above the threshold (kept at its value at chi beyond chi). For fast
         electrons and n above 10/k to 30 the ratio to hydrogen is that of a lower n: within 2 per
         cent below chi, 20 per cent of what is next to nothing above it; recombination coefficients
-        of single levels within 0.3 per cent, their sum 1e-6. l from 3: hydrogenic.
+        of single levels within 0.3 per cent, their sum 1e-6. Channels of the levels n = 2 carry the
+        factors of the lines they continue (:func:`levelnet.atomic.helium_lines.channel_factors`, up
+        to 3.7 per cent). l from 3: hydrogenic. Case-B totals lie 0.2 per cent (1e3 K) to 0.8 per
+        cent (2.5e4 K) above those of Hummer & Storey 1998.
 
     Notes
     -----
@@ -292,13 +296,23 @@ def _squared_integrals(
         free.append(weight * free_function(energy, l, defect, grid))
     total = []
     for l, functions in enumerate(bound):
-        up = functions @ free[l + 1]
-        squared = (l + 1.0) / (2.0 * l + 1.0) * up**2
-        if l > 0:
-            down = functions @ free[l - 1]
-            squared = squared + l / (2.0 * l + 1.0) * down**2
+        squared = np.zeros(len(functions))
+        for l_free in (l - 1, l + 1)[l == 0 :]:
+            channel = max(l, l_free) / (2.0 * l + 1.0) * (functions @ free[l_free]) ** 2
+            if levels.nuclear_charge == 2:
+                channel[_is_second(levels, l, spin)[: len(channel)]] *= _factor(l, spin, l_free)
+            squared += channel
         total.append(squared)
     return total
+
+
+def _is_second(levels: HeliumLevels, l: int, spin: int) -> BoolArray:
+    return np.asarray(levels.n[levels.series(l, spin)] == 2)
+
+
+def _factor(l: int, spin: int, l_free: int) -> float:
+    # The continuum goes on from the lines of the series.
+    return channel_factors().get(((2, l, spin), l_free), (0, 1.0))[1]
 
 
 def _unit(levels: HeliumLevels) -> float:

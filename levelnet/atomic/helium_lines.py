@@ -7,6 +7,7 @@ held as hydrogen's blocks are, so that the same elimination takes them.
 
 from __future__ import annotations
 
+import functools
 from dataclasses import dataclass
 
 import numpy as np
@@ -17,8 +18,10 @@ from ..errors import InputError
 from .bound_bound import DipoleBlocks, dipole_blocks, strength_scale, transition_frequency
 from .coulomb_functions import bound_functions, radial_grid
 from .helium_ground import published_rates_per_s, resonance_rates_per_s
-from .helium_levels import SERIES_L, HeliumLevels, term_numbers
+from .helium_levels import SERIES_L, HeliumLevels, helium_levels, term_numbers
 from .levels import reduced_mass_ratio
+
+_HIGHEST_PUBLISHED = 4
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -81,8 +84,10 @@ def helium_lines(levels: HeliumLevels) -> HeliumLines:
     -------
     HeliumLines
         Published rates: as `helium/transition_rates` says. Coulomb approximation (l = 0, 1, 2 with
-        l + 1): within 2.5 per cent of them, 3 3P - 2 3S 3.6 per cent. Between l = 3 and higher:
-        hydrogenic radial integrals, in error by about the quantum defects, 1e-3.
+        l + 1): alone it is within 2.5 per cent of them, 3 3P - 2 3S 3.6 per cent; with the factors
+        of :func:`channel_factors` for lines to n = 2, within 0.5 per cent; between higher levels
+        about 1 per cent. Between l = 3 and higher: hydrogenic radial integrals, in error by about
+        the quantum defects, 1e-3.
 
     Notes
     -----
@@ -99,19 +104,52 @@ def helium_lines(levels: HeliumLevels) -> HeliumLines:
     return HeliumLines(levels, (ladders[0], ladders[1]))
 
 
+@functools.cache
+def channel_factors() -> dict[tuple[tuple[int, int, int], int], tuple[int, float]]:
+    """Corrections of the Coulomb approximation along each series that begins at n = 2.
+
+    Returns
+    -------
+    dict
+        By lower term (n, l, spin) and l of the upper one: the highest n with a published line, and
+        published over computed rate of that line. What the approximation misses, the core, is the
+        same for all higher levels of a series and for the slow continuum that it joins: with the
+        factor, lines that were left out meet published rates within 0.5 per cent instead of 4.
+
+    References
+    ----------
+    Seaton 1983, Rep. Prog. Phys. 46, 167 (smoothness in energy across the threshold).
+    """
+    levels = helium_levels(_HIGHEST_PUBLISHED)
+    hydrogen = dipole_blocks(_HIGHEST_PUBLISHED)
+    ladders = (_computed(levels, 0, hydrogen), _computed(levels, 1, hydrogen))
+    computed = HeliumLines(levels, ladders)
+    factors: dict[tuple[tuple[int, int, int], int], tuple[int, float]] = {}
+    for upper, lower, rate in _published_terms():
+        key = lower, upper[1]
+        if lower[0] == 2 and factors.get(key, (0, 0.0))[0] < upper[0]:
+            got = computed.einstein_a(levels.index(*upper), levels.index(*lower))
+            factors[key] = upper[0], rate / got
+    return factors
+
+
 def _ladder(levels: HeliumLevels, spin: int, hydrogen: DipoleBlocks) -> DipoleBlocks:
-    strengths = np.zeros_like(hydrogen.strength_per_s)
-    blocks = DipoleBlocks(levels.n_max, 1, strengths, hydrogen.offset)
+    blocks = _computed(levels, spin, hydrogen)
+    if levels.nuclear_charge == 2:
+        _put_published(levels, spin, blocks)
+    blocks.strength_per_s.flags.writeable = False
+    return blocks
+
+
+def _computed(levels: HeliumLevels, spin: int, hydrogen: DipoleBlocks) -> DipoleBlocks:
+    blocks = DipoleBlocks(levels.n_max, 1, np.zeros_like(hydrogen.strength_per_s), hydrogen.offset)
     low = _low_integrals(levels, spin)
     for l in range(levels.n_max - 1):
         rows, columns = levels.series(l, spin), levels.series(l + 1, spin)
         radial = low[l] if l < len(low) else _hydrogenic_integrals(levels, spin, l, hydrogen)
-        filled = _strengths(levels, rows, columns, radial)
         # Triplets have no first row for l = 0.
-        blocks.block(l)[levels.n[rows[0]] - l - 1 :] = filled
-    if levels.nuclear_charge == 2:
-        _put_published(levels, spin, blocks)
-    strengths.flags.writeable = False
+        first = levels.n[rows[0]] - l - 1
+        blocks.block(l)[first:] = _strengths(levels, rows, columns, radial)
     return blocks
 
 
@@ -155,14 +193,27 @@ def _hydrogenic_integrals(
 
 
 def _put_published(levels: HeliumLevels, spin: int, blocks: DipoleBlocks) -> None:
-    lines = {key: a for key, a in published_rates_per_s().items() if key[0][-1].isalpha()}
-    for (up, down), a in lines.items():
-        upper, lower = term_numbers(up), term_numbers(down)
-        if upper[2] != spin or max(upper[0], lower[0]) > levels.n_max:
+    for (lower, l_upper), (last, factor) in channel_factors().items():
+        # A series is part of a row or of a column, whichever has the higher l.
+        if lower[2] == spin and levels.n_max > last and l_upper > lower[1]:
+            blocks.block(lower[1])[lower[0] - lower[1] - 1, last - l_upper :] *= factor
+        elif lower[2] == spin and levels.n_max > last:
+            blocks.block(l_upper)[last - l_upper :, lower[0] - lower[1] - 1] *= factor
+    for upper, lower, rate in _published_terms():
+        if upper[2] != spin or upper[0] > levels.n_max:
             continue
         ratio = (2.0 * upper[1] + 1.0) / (2.0 * lower[1] + 1.0)
         below, above = (upper, lower) if upper[1] < lower[1] else (lower, upper)
         block = blocks.block(below[1])
-        block[below[0] - below[1] - 1, above[0] - above[1] - 1] = a * np.sqrt(ratio)
+        block[below[0] - below[1] - 1, above[0] - above[1] - 1] = rate * np.sqrt(ratio)
     if spin == 0:
         blocks.block(0)[0] = resonance_rates_per_s(levels) * np.sqrt(3.0)
+
+
+def _published_terms() -> list[tuple[tuple[int, int, int], tuple[int, int, int], float]]:
+    # Dipole lines between whole terms; names that end in J are the forbidden ones.
+    return [
+        (term_numbers(upper), term_numbers(lower), rate)
+        for (upper, lower), rate in published_rates_per_s().items()
+        if upper[-1].isalpha()
+    ]

@@ -49,9 +49,9 @@ def frequency_cells(
     step : float, dimensionless
         Width of a cell in ln nu, from :func:`fitted_step`.
     two_photon_rate_per_s : float, s^-1
-        Spontaneous 2s-1s rate.
+        Spontaneous 2s-1s rate of the measured atom.
     rate_scale : float, dimensionless
-        What changed constants do to second-order rates per unit frequency.
+        What changed constants do to second-order rates.
 
     Returns
     -------
@@ -71,7 +71,7 @@ def frequency_cells(
         rates = _rates_in_cells(name, _ways(name, lines), step, lowest, len(number))
         weight[k] = rate_scale * rates
         if name == (2, 0):
-            weight[k, number < 0] = two_photon_rate_per_s / two_photon_rate() * rates[number < 0]
+            weight[k, number < 0] *= two_photon_rate_per_s / two_photon_rate()
     level = np.array([position[one] for one in chosen], dtype=np.int64)
     alpha_ev = float(resonance.energy_ev[0])
     upper_n = np.arange(2, count + 2)

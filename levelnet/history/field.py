@@ -305,7 +305,7 @@ def _march(
         setup.lines,
         fitted_step(asked),
         setup.two_photon_rate_per_s,
-        factor.two_photon_rate / factor.energy,
+        factor.two_photon_rate,
     )
     wanted = outputs[:: max(1, math.ceil(len(outputs) / _MOST_SPECTRA))]
     return cells, march(cells, path, path.start, state, end, wanted)
@@ -347,11 +347,10 @@ def _field(equations: SlowEquations, cells: Cells, marched: Marched) -> Radiatio
     # At the end of a step packets stand at the upper edges of the cells they are about to enter.
     # The mean over a cell is better than either: where scattering is fast it alone is settled.
     edges = marched.track.spectra[first]
-    middle = 0.5 * (edges[:, 1:] + edges[:, :-1])
-    core = cells.line_cell - 1
-    middle[:, core] = edges[:, core]  # a thick line is as its red side
     energy_ev = cells.energy_ev * np.exp(cells.offset[1:])
-    radiation_k = equations.cosmology.cmb_temperature_k * np.exp(-when)
-    return RadiationField(
-        np.expm1(-when), energy_ev, log_distortion(middle, energy_ev, radiation_k[:, None])
-    )
+    edge_ev = energy_ev * math.exp(-0.5 * cells.step)
+    radiation_k = equations.cosmology.cmb_temperature_k * np.exp(-when)[:, None]
+    found = log_distortion(0.5 * (edges[:, 1:] + edges[:, :-1]), energy_ev, radiation_k)
+    core = cells.line_cell - 1  # a thick line is as its red side
+    found[:, core] = log_distortion(edges[:, core], edge_ev[core], radiation_k)
+    return RadiationField(np.expm1(-when), energy_ev, found)

@@ -7,8 +7,8 @@ from collections.abc import Iterable
 from ..errors import Outcome
 from ..network.tabulation import TabulatedReduction
 from .cost import table_tolerance
-from .local import Local
 from .integrate import Integrated
+from .local import Local
 from .setup import Setup
 
 SLOW_RELAXATION = 100.0

@@ -23,9 +23,9 @@ from ..escape.blue_side import Past, log_red_side
 from ..escape.treatment import ResonanceLines
 from ..network.gradient import net_flow_gradient
 from .equations import SlowEquations
-from .local import Local
 from .integrate import Integrated
 from .line_figures import LineFigures
+from .local import Local
 from .start import equilibrium_state
 
 _GIVEN = ("optical_depth", "escape_probability", "log_blue_side", "log_red_side")

@@ -69,8 +69,9 @@ def test_series_continue_the_published_terms(l: int, spin: int) -> None:
     defect = levels.n[one] - nu
     # The rounding of the table, 0.005 cm^-1, as an error of the defect.
     rounding = 0.005 * levels.n[one].astype(float) ** 3 / (2 * 109722.273)
+    # By itself a defect changes by less than 1.4e-4 from n = 8 on: d2 (1/64 - 1/81), d2 up to 0.04.
     steps = np.abs(np.diff(defect))[levels.n[one][:-1] >= 8]
-    assert np.all(steps < 2.2 * rounding[-1] + 5e-4 / 8)
+    assert np.all(steps < 2.2 * rounding[-1] + 1.4e-4)
     missed = np.abs(defect - quantum_defect(l, spin, -(nu**-2.0)))
     assert np.all(missed[levels.n[one] > 10] < ROUND_OFF * 100)
     at_ten = levels.n[one] == 10

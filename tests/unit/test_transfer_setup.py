@@ -18,7 +18,7 @@ from tests.small_runs import small_setup
 
 COSMOLOGY = {"hubble_km_s_mpc": 68.0, "baryon_density_h2": 0.0224, "matter_density_h2": 0.142}
 FIELD = {"hydrogen": "transfer"}
-OVERRIDE = ["escape,2p,1s,1.1,,INVENTED"]
+OVERRIDE = ["escape,2p,,1.1,,INVENTED"]
 
 
 def values(**tables: Any) -> dict[str, Any]:
