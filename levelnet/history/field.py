@@ -35,6 +35,8 @@ _SPACING = 0.004
 _RECORD, _POINTS = 1e-3, 2e-3
 _MOST_SPECTRA = 50
 _MOST_ITERATIONS = 20
+# With fewer there is nothing to return.
+_FEWEST_STEPS = 3
 # Of the change of x_HI in a step.
 _TOLERANCE = 1e-9
 _NEVER = -700.0
@@ -221,6 +223,8 @@ def march(
         raise SolveError(Outcome.SINGULAR.value)
     done = int(track.report[0])
     outcome = Outcome.CONVERGED if status == kernel.DONE else Outcome.STEP_TOO_SMALL
+    if done < _FEWEST_STEPS:
+        raise SolveError(outcome.value, outcome=outcome)
     step = np.arange(done + 1, dtype=float)
     return Marched(
         start + cells.step * step,
@@ -268,8 +272,9 @@ def resolve_field(
     )
     cells, marched = fine
     points = _points(marched, outputs)
+    shared = points[points <= coarse[1].time[-1]]
     there, less = (
-        1.0 / (1.0 + np.exp(-CubicSpline(one.time, one.state[:, 0])(points)))
+        1.0 / (1.0 + np.exp(-CubicSpline(one.time, one.state[:, 0])(shared)))
         for one in (marched, coarse[1])
     )
     recorded = replace(

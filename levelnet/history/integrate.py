@@ -10,6 +10,7 @@ import numpy as np
 
 from ..arrays import FloatArray
 from ..atomic.physics import scales
+from ..errors import SolveError
 from ..escape.blue_side import Past
 from ..escape.family import treatment as member
 from ..escape.resolved import ResolvedField
@@ -144,11 +145,18 @@ def march_field(
         Output redshifts, descending.
     tell : callable
         Progress.
+
+    Raises
+    ------
+    SolveError
+        If the integration without the field, or the march, cannot be done.
     """
     accuracy = replace(setup.accuracy, relative=max(setup.accuracy.relative, _REFERENCE))
     rough = replace(setup, accuracy=accuracy)
     redshift = _march_redshifts(handover, redshift)
     reference = integrate_slow(rough, equations, handover, redshift, lambda *_: None)
+    if not reference.outcome.ok:
+        raise SolveError(reference.outcome.value, outcome=reference.outcome)
     tell("radiation field", 0.0)
     run = resolve_field(setup, equations, reference, redshift)
     tell("radiation field", 1.0)

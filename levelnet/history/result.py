@@ -81,7 +81,7 @@ class RadiationField:
     Attributes
     ----------
     redshift : ndarray, shape (n_spectra,), dimensionless
-        Output redshifts where it is kept, descending.
+        Where it is kept, descending: ends of steps, within half a step of output redshifts.
     photon_energy_ev : ndarray, shape (n_energies,), eV
         From half of Lyman-alpha to the Lyman limit, ascending.
     log_distortion : ndarray, shape (n_spectra, n_energies), dimensionless

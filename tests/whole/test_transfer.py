@@ -15,6 +15,8 @@ from scipy.interpolate import CubicSpline, RectBivariateSpline
 from levelnet import constants as const
 from levelnet import read, solve, with_expansion, write
 from levelnet.atomic.physics import Physics, scales
+from levelnet.errors import Outcome, SolveError
+from levelnet.history import field as field_module
 from levelnet.history.result import History
 from tests.same_records import assert_same
 from tests.small_runs import COSMOLOGY, small_setup
@@ -249,3 +251,16 @@ def test_down_to_the_coldest_field(on: tuple[str, ...]) -> None:
     assert history.diagnostics.photon_number_error < 1e-9
     assert history.field is not None
     assert np.all(np.isfinite(history.field.log_distortion))
+
+
+def test_a_march_that_fails_at_once_says_so(monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setattr(field_module, "_MOST_ITERATIONS", 1)
+    with pytest.raises(SolveError) as caught:
+        changed()
+    assert caught.value.outcome is Outcome.STEP_TOO_SMALL
+
+
+def test_step_limit_holds_for_the_history_that_tells_the_matter_temperature() -> None:
+    with pytest.raises(SolveError, match="step limit") as caught:
+        changed(accuracy={"max_steps": 30})
+    assert caught.value.outcome is Outcome.STEP_LIMIT
