@@ -10,7 +10,7 @@ RAMAN_LEVELS = ((2, 0), (3, 0), (3, 2))
 """(n, l) of the levels with Raman scattering; higher ones have far smaller populations."""
 TWO_PHOTON_N_MAX = 10
 """Highest n of ns and nd levels whose two-photon spectra are known."""
-COARSEST_STEP = 0.01
+COARSEST_STEP = 0.004
 """Widest frequency step: a line and the next one up must stay many cells apart."""
 
 
@@ -35,7 +35,7 @@ class Transfer:
         Raman scattering from 2s, 3s and 3d, and its inverse, outside the lines themselves.
     scattering : bool
         Resonance scattering in the wings of Lyman-alpha: diffusion with recoil.
-    frequency_step : float, 1e-5 to 0.01 (dimensionless), or None
+    frequency_step : float, 1e-5 to 0.004 (dimensionless), or None
         d ln nu of a cell of the grid; None: as the asked accuracy needs it.
     highest_two_photon_n : int, 3 to 10
         Highest n of the levels in `excited_two_photon`.

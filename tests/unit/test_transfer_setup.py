@@ -93,7 +93,7 @@ REFUSED: dict[str, tuple[dict[str, Any], list[str]]] = {
     "not a table": (values(lines=FIELD | {"transfer": 3}), ["lines.transfer"]),
     "step out of range": (
         values(lines=FIELD | {"transfer": {"frequency_step": 0.02}}),
-        ["lines.transfer.frequency_step = 0.02", "0.01"],
+        ["lines.transfer.frequency_step = 0.02", "0.004"],
     ),
     "step not a number": (
         values(lines=FIELD | {"transfer": {"frequency_step": float("nan")}}),
