@@ -444,7 +444,7 @@ class Path(NamedTuple):
         Cubic pieces in the distance from their lower node, highest power first, of: ln A_i at the
         reference T_m, its slope in ln T_m, ln of B_i x_B,i/x_1s, ln of the downward exchange of
         each pair, then ln H, ln of the reference T_m over T_r, ln of the 2s-1s rate that does not
-        go through the field.
+        go through the field. Beyond the nodes the last piece goes on.
     lower, upper : ndarray of int, shape (n_pairs,)
         Pairs of kept levels.
     weight_ratio, energy_ev : ndarray, shape (n_kept,)
@@ -739,7 +739,7 @@ def _settle(
         miss = flow * cells.step / hubble - guess
         if abs(miss) <= limits[0] * max(abs(guess), 1e-9 * min(neutral, ionized)):
             return Attempt(guess, miss, slope, flow, slow, count + 1, True)
-        if count:
+        if count and guess != last_guess:  # equal where both were held inside the fractions
             slope = min((miss - last_miss) / (guess - last_guess), -1e-3)
         last_guess, last_miss = guess, miss
         guess -= miss / slope
