@@ -35,8 +35,7 @@ _SPACING = 0.004
 _RECORD, _POINTS = 1e-3, 2e-3
 _MOST_SPECTRA = 50
 _MOST_ITERATIONS = 20
-# With fewer there is nothing to return.
-_FEWEST_STEPS = 3
+_FEWEST_RECORDS = 4  # for a cubic spline
 # Of the change of x_HI in a step.
 _TOLERANCE = 1e-9
 _NEVER = -700.0
@@ -54,7 +53,8 @@ class FieldRun(NamedTuple):
     field : RadiationField
         Spectra.
     frequency_step, frequency_error : float, dimensionless
-        d ln nu, and the largest relative change of x_e at the outputs on a grid twice as coarse.
+        d ln nu, and the largest relative change of x_e on a grid twice as coarse; infinite where
+        the march on that grid ended early.
     photon_number_error, atom_number_error : float, dimensionless
         Largest relative imbalance in any step.
     steps : int
@@ -201,9 +201,10 @@ def _sample(
 def march(
     cells: Cells, path: Path, start: float, state: FloatArray, end: float, spectra: FloatArray
 ) -> Marched:
-    """March from equilibrium at `start` to `end` in ln a, keeping the field near `spectra`."""
-    n_steps = math.ceil((end - start) / cells.step)
+    """March from equilibrium at `start` past `end` in ln a, keeping the field near `spectra`."""
     stride = max(1, round(_RECORD / cells.step))
+    # So far beyond that the last record is: K and s change by per cents from one to the next.
+    n_steps = math.ceil((end - start) / cells.step) + stride
     n_records = (n_steps - 1) // stride + 1
     n, n_lines = len(path.weight_ratio), len(cells.line_cell)
     wanted = np.clip(np.rint((spectra - start) / cells.step), 1, n_steps).astype(np.int64)
@@ -220,10 +221,10 @@ def march(
         cells, path, first, stride, wanted, _TOLERANCE, _MOST_ITERATIONS, make_room(cells), track
     )
     if status == kernel.SINGULAR:
-        raise SolveError(Outcome.SINGULAR.value)
+        raise SolveError(Outcome.SINGULAR.value, outcome=Outcome.SINGULAR)
     done = int(track.report[0])
     outcome = Outcome.CONVERGED if status == kernel.DONE else Outcome.STEP_TOO_SMALL
-    if done < _FEWEST_STEPS:
+    if done <= _FEWEST_RECORDS * stride:
         raise SolveError(outcome.value, outcome=outcome)
     step = np.arange(done + 1, dtype=float)
     return Marched(
@@ -253,12 +254,12 @@ def resolve_field(
     reference : Trajectory
         Their solution from the start down to the last output, or nearly.
     redshift : ndarray, shape (n_redshift,), dimensionless
-        Output redshifts, descending.
+        Output redshifts, descending, the last well below the start.
     """
     start, state = float(reference.time[0]), reference.state[0]
     outputs = -np.log1p(redshift)
     outputs = outputs[outputs > start]
-    end = float(outputs[-1]) if len(outputs) else start + 10.0 * _POINTS
+    end = float(outputs[-1])
     asked = setup.frequency_step
     path = make_path(
         equations,
@@ -267,16 +268,10 @@ def resolve_field(
         end,
         setup.lines.two_photon != "distorted",
     )
-    fine, coarse = (
+    (cells, marched), (_, coarse) = (
         _march(setup, equations, path, state, end, step, outputs) for step in (asked, 2.0 * asked)
     )
-    cells, marched = fine
     points = _points(marched, outputs)
-    shared = points[points <= coarse[1].time[-1]]
-    there, less = (
-        1.0 / (1.0 + np.exp(-CubicSpline(one.time, one.state[:, 0])(shared)))
-        for one in (marched, coarse[1])
-    )
     recorded = replace(
         equations,
         treatment=ResolvedField.of(_record(setup, equations, marched)),
@@ -287,11 +282,21 @@ def resolve_field(
         _trajectory(marched, points),
         _field(equations, cells, marched),
         cells.step,
-        float(np.max(np.abs(there / less - 1.0))),
+        _frequency_error(marched, coarse, points),
         float(marched.track.report[2]),
         float(marched.track.report[3]),
         len(marched.time) - 1,
     )
+
+
+def _frequency_error(fine: Marched, coarse: Marched, points: FloatArray) -> float:
+    if not coarse.outcome.ok:
+        return math.inf
+    there, less = (
+        1.0 / (1.0 + np.exp(-CubicSpline(one.time, one.state[:, 0])(points)))
+        for one in (fine, coarse)
+    )
+    return float(np.max(np.abs(there / less - 1.0)))
 
 
 def _march(
@@ -323,8 +328,9 @@ def _points(marched: Marched, outputs: FloatArray) -> FloatArray:
     last = float(reached[-1]) if len(reached) else end
     between = np.linspace(start, last, max(8, math.ceil((last - start) / _POINTS)) + 1)
     # Neither doubled nor nearly so.
-    apart = np.min(np.abs(np.subtract.outer(between, reached)), axis=1, initial=np.inf)
-    points: FloatArray = np.union1d(between[apart > 0.05 * _POINTS], [start, *reached])
+    near = 0.05 * _POINTS
+    alone = np.searchsorted(reached, between - near) == np.searchsorted(reached, between + near)
+    points: FloatArray = np.union1d(between[alone], [start, *reached])
     return points
 
 
