@@ -98,7 +98,7 @@ def history_with_field(
         radiation_k * np.exp(state[:, 1]),
         radiation_k,
         handover.redshift,
-        len(run.trajectory.time) - 1,
+        run.steps,
         0,
         _observables(setup, course, float(redshift[-1])) if observables else None,
         None,

@@ -222,7 +222,7 @@ def march(
     )
     if status == kernel.SINGULAR:
         raise SolveError(Outcome.SINGULAR.value, outcome=Outcome.SINGULAR)
-    done = int(track.report[0])
+    done = int(track.report[kernel.STEPS])
     outcome = Outcome.CONVERGED if status == kernel.DONE else Outcome.STEP_TOO_SMALL
     if done <= _FEWEST_RECORDS * stride:
         raise SolveError(outcome.value, outcome=outcome)
@@ -283,8 +283,8 @@ def resolve_field(
         _field(equations, cells, marched),
         cells.step,
         _frequency_error(marched, coarse, points),
-        float(marched.track.report[2]),
-        float(marched.track.report[3]),
+        float(marched.track.report[kernel.PHOTON_ERROR]),
+        float(marched.track.report[kernel.ATOM_ERROR]),
         len(marched.time) - 1,
     )
 
@@ -336,7 +336,9 @@ def _points(marched: Marched, outputs: FloatArray) -> FloatArray:
 
 def _trajectory(marched: Marched, points: FloatArray) -> Trajectory:
     state = CubicSpline(marched.time, marched.state)(points)
-    return Trajectory(points, state, marched.outcome, 0, int(marched.track.report[1]))
+    return Trajectory(
+        points, state, marched.outcome, 0, int(marched.track.report[kernel.ELIMINATIONS])
+    )
 
 
 def _record(setup: Setup, equations: SlowEquations, marched: Marched) -> FieldRecord:

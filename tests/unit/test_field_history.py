@@ -42,7 +42,7 @@ def test_a_march_that_fails_before_there_are_records(monkeypatch: pytest.MonkeyP
 
     def stopping(*arguments: Any) -> int:
         whole(*arguments)
-        arguments[-1].report[0] = 10.0
+        arguments[-1].report[kernel.STEPS] = 10.0
         return kernel.NOT_CONVERGED
 
     monkeypatch.setattr(kernel, "march", stopping)
