@@ -88,6 +88,13 @@ def test_study_from_setup_to_verdict(folder: Path, capsys: pytest.CaptureFixture
     assert "not for a study of the escape" in capsys.readouterr().err
 
 
+def test_help_names_the_order_that_is_used(capsys: pytest.CaptureFixture[str]) -> None:
+    with pytest.raises(SystemExit):
+        main(["escape", "--help"])
+    said = "".join(capsys.readouterr().out.split())
+    assert f"(default:{','.join(SWITCHES)})" in said
+
+
 @pytest.mark.parametrize(
     ("changed", "words", "message"),
     [
