@@ -10,7 +10,7 @@ import numpy as np
 
 from ..arrays import FloatArray
 from ..atomic.physics import scales
-from ..errors import SolveError
+from ..errors import InputError, SolveError
 from ..escape.blue_side import Past
 from ..escape.family import treatment as member
 from ..escape.resolved import ResolvedField
@@ -92,6 +92,8 @@ def integrate_history(
     chosen = line_treatment or member(setup.lines.hydrogen)
     handover = setup_handover(setup, chosen)
     resolved = isinstance(chosen, ResolvedField)
+    if resolved and setup.lines.transfer is None:
+        raise InputError('line_treatment: a resolved field needs lines.hydrogen = "transfer"')
     if start_above > handover.redshift and not resolved:
         handover = Handover(start_above, handover.departure)
     ladder = build_ladder(setup, keeps=(*chosen.keeps, *setup.lines.field_levels, *keeps))

@@ -7,8 +7,9 @@ from typing import Any
 import numpy as np
 import pytest
 
-from levelnet import SolveError, solve
+from levelnet import InputError, SolveError, solve
 from levelnet.errors import Outcome
+from levelnet.escape.resolved import ResolvedField
 from levelnet.history import field as field_run
 from levelnet.history.field import Marched
 from levelnet.history.setup import Setup
@@ -65,3 +66,9 @@ def test_a_coarser_march_that_fails_tells_no_error(monkeypatch: pytest.MonkeyPat
 
     monkeypatch.setattr(field_run, "march", stopping)
     assert solve(run(1500.0, 1100.0)).diagnostics.frequency_error == np.inf
+
+
+def test_a_field_needs_a_setup_that_says_what_it_does() -> None:
+    """Own rule: it marched with scattering alone, and none of the checks of a setup."""
+    with pytest.raises(InputError, match="line_treatment: a resolved field needs"):
+        solve(small_setup(5, 1500.0, 4), line_treatment=ResolvedField())
