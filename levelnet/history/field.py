@@ -136,7 +136,7 @@ def march(
     if status == kernel.SINGULAR:
         raise SolveError(Outcome.SINGULAR.value, outcome=Outcome.SINGULAR)
     done = int(track.report[kernel.STEPS])
-    outcome = Outcome.CONVERGED if status == kernel.DONE else Outcome.STEP_TOO_SMALL
+    outcome = Outcome.CONVERGED if status == kernel.DONE else Outcome.FIELD_NOT_SETTLED
     if done <= _FEWEST_RECORDS * stride:
         raise SolveError(outcome.value, outcome=outcome)
     step = np.arange(done + 1, dtype=float)
@@ -230,7 +230,9 @@ def _march(
         setup.two_photon_rate_per_s,
         factor.two_photon_rate,
     )
-    wanted = outputs[:: max(1, math.ceil(len(outputs) / _MOST_SPECTRA))]
+    # Evenly over the outputs, the first and the last among them.
+    count = min(len(outputs), _MOST_SPECTRA)
+    wanted = outputs[np.unique(np.linspace(0, len(outputs) - 1, count).round().astype(int))]
     return cells, march(cells, path, path.start, state, end, wanted)
 
 

@@ -50,7 +50,7 @@ def test_a_march_that_fails_before_there_are_records(monkeypatch: pytest.MonkeyP
     lines = LINES | {"transfer": {"frequency_step": 1e-4}}
     with pytest.raises(SolveError) as caught:
         solve(small_setup(5, 1500.0, 5, lines=lines))
-    assert caught.value.outcome is Outcome.STEP_TOO_SMALL
+    assert caught.value.outcome is Outcome.FIELD_NOT_SETTLED
 
 
 def test_a_coarser_march_that_fails_tells_no_error(monkeypatch: pytest.MonkeyPatch) -> None:
@@ -61,7 +61,7 @@ def test_a_coarser_march_that_fails_tells_no_error(monkeypatch: pytest.MonkeyPat
         if cells.step <= STEP:
             return found
         return found._replace(
-            time=found.time[:50], state=found.state[:50], outcome=Outcome.STEP_TOO_SMALL
+            time=found.time[:50], state=found.state[:50], outcome=Outcome.FIELD_NOT_SETTLED
         )
 
     monkeypatch.setattr(field_run, "march", stopping)
