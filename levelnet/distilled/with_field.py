@@ -13,9 +13,11 @@ from ..background.cosmology import Cosmology
 from ..background.last_scattering import ionized_redshift, observe
 from ..background.quadrature import quadrature
 from ..errors import SolveError
+from ..escape.left_out import left_out
 from ..escape.lines import Lines
 from ..history.course import Course, electron_fraction_at, state_at
 from ..history.integrate import handover_of, march_field, slow_equations
+from ..history.limits import field_notes
 from ..history.setup import Accuracy, Grid, Setup
 from .fast import FastHistory, fractions
 from .kept import check_kept
@@ -104,6 +106,12 @@ def history_with_field(
         None,
         run.field,
         run.frequency_error,
+        (
+            *left_out(setup.lines),
+            *field_notes(run.frequency_step, run.frequency_error),
+            f"field: frequency step {run.frequency_step:.3g}; in a step photons are off by at most "
+            f"{run.photon_number_error:.1e}, atoms by {run.atom_number_error:.1e}, relative",
+        ),
     )
 
 

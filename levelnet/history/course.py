@@ -13,7 +13,6 @@ from ..numerics.stepping import Trajectory
 from .equations import SlowEquations, ionized_and_neutral
 from .start import Handover, equilibrium_state
 
-
 _SAME = 1e-9  # two times in ln a that differ by rounding alone
 
 

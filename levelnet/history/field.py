@@ -266,7 +266,6 @@ def _record(setup: Setup, equations: SlowEquations, marched: Marched) -> FieldRe
         track.source[:count],
         log_distortion(track.sides[:count], lines.energy_ev[:, None], radiation_k[:, None, None]),
         equations.two_photon_rate_per_s if through_field else 0.0,
-        setup.lines.field_resolves,
     )
 
 
