@@ -7,6 +7,7 @@ level between it and the ground state, and so no resonances.
 from __future__ import annotations
 
 import functools
+from collections.abc import Callable
 from math import pi
 
 import numpy as np
@@ -25,6 +26,10 @@ _N_NODES = 32
 _CUTOFF = 40.0
 _LOWEST_K, _HIGHEST_K = 1e-3, 1e6
 _GAP = 0.375  # of 2s above 1s, hartree
+
+
+Profile = Callable[[FloatArray], FloatArray]
+"""Two-photon profile over the total rate as a function of y; its integral over 0 to 1 is 2."""
 
 
 def two_photon_rate(charge: int = 1) -> float:
@@ -82,7 +87,9 @@ def two_photon_profile(y: float | FloatArray) -> FloatArray:
 
 
 def stimulated_two_photon_factor(
-    temperature_k: float | FloatArray, transition_energy_ev: float
+    temperature_k: float | FloatArray,
+    transition_energy_ev: float,
+    profile: Profile | None = None,
 ) -> FloatArray:
     """Factor by which a blackbody field speeds up the 2s -> 1s two-photon decay.
 
@@ -92,6 +99,8 @@ def stimulated_two_photon_factor(
         Temperature of the blackbody field.
     transition_energy_ev : float, eV, positive
         Energy of 2s above 1s, shared by the two photons.
+    profile : callable, optional
+        Profile over the total rate, dimensionless, as a function of y; hydrogen's if not given.
 
     Returns
     -------
@@ -114,12 +123,14 @@ def stimulated_two_photon_factor(
     Chluba & Sunyaev 2006, A&A 446, 39.
     """
     ratio = _photon_ratio(temperature_k, transition_energy_ev)
-    absorbed, _ = _stimulation_integrals(ratio)
+    absorbed, _ = _stimulation_integrals(ratio, profile or _relative_profile)
     return (1.0 + absorbed) / -np.expm1(-ratio)
 
 
 def stimulated_two_photon_slope(
-    temperature_k: float | FloatArray, transition_energy_ev: float
+    temperature_k: float | FloatArray,
+    transition_energy_ev: float,
+    profile: Profile | None = None,
 ) -> FloatArray:
     """Return the derivative d ln(factor)/d ln T of :func:`stimulated_two_photon_factor`.
 
@@ -129,6 +140,8 @@ def stimulated_two_photon_slope(
         Temperature of the blackbody field.
     transition_energy_ev : float, eV, positive
         Energy of 2s above 1s.
+    profile : callable, optional
+        As for :func:`stimulated_two_photon_factor`.
 
     Returns
     -------
@@ -145,7 +158,7 @@ def stimulated_two_photon_slope(
     Derived from the formula of :func:`stimulated_two_photon_factor`.
     """
     ratio = _photon_ratio(temperature_k, transition_energy_ev)
-    absorbed, growth = _stimulation_integrals(ratio)
+    absorbed, growth = _stimulation_integrals(ratio, profile or _relative_profile)
     return growth / (1.0 + absorbed) + ratio * np.exp(-ratio) / -np.expm1(-ratio)
 
 
@@ -165,7 +178,7 @@ def _photon_ratio(temperature_k: float | FloatArray, transition_energy_ev: float
     return transition_energy_ev / (const.BOLTZMANN_EV_K * temperature)
 
 
-def _stimulation_integrals(ratio: FloatArray) -> tuple[FloatArray, FloatArray]:
+def _stimulation_integrals(ratio: FloatArray, profile: Profile) -> tuple[FloatArray, FloatArray]:
     """Return int phi f dy and its derivative by ln T, for each u = h nu_21/kT.
 
     In t = u y the occupation varies on a scale of 1 whatever the temperature, and phi/y is smooth;
@@ -176,8 +189,7 @@ def _stimulation_integrals(ratio: FloatArray) -> tuple[FloatArray, FloatArray]:
     t = np.minimum(ratio, _CUTOFF)[..., None] * nodes
     y = t / ratio[..., None]
     occupation = 1.0 / np.expm1(t)
-    phi = _profile_infinite_mass(y) / _total_infinite_mass()
-    absorbed = phi * occupation
+    absorbed = profile(y) * occupation
     step = np.minimum(1.0, _CUTOFF / ratio)
     return step * (absorbed @ weights), step * ((absorbed * (1.0 + occupation) * t) @ weights)
 
@@ -194,6 +206,10 @@ def _total_infinite_mass() -> float:
     """Half the integral of the profile, s^-1, for an infinitely heavy nucleus of charge 1."""
     nodes, weights = _gauss_rule()
     return 0.5 * float(_profile_infinite_mass(nodes) @ weights)
+
+
+def _relative_profile(y: FloatArray) -> FloatArray:
+    return _profile_infinite_mass(y) / _total_infinite_mass()
 
 
 def _profile_infinite_mass(y: FloatArray) -> FloatArray:
