@@ -16,6 +16,10 @@ class Outcome(Enum):
         "the step size shrank to nothing; check the expansion table and the chosen line treatment "
         "for jumps"
     )
+    FIELD_NOT_SETTLED = (
+        "one step of radiation field, levels and ionization together did not settle; try another "
+        "lines.transfer.frequency_step"
+    )
     TABLE_TOO_COARSE = (
         "the reduced network could not be interpolated to the tolerance; loosen accuracy.relative "
         "or set accuracy.interpolate = false"

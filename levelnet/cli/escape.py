@@ -11,10 +11,10 @@ from typing import TYPE_CHECKING
 from .console import Console
 from .distill import worker_count, worker_processes
 from .escape_output import escape_summary, escape_values
-from .levels import WITHIN, asked_range, asked_requirement
 from .output import print_result
 from .paths import check_folder, check_target
 from .solve import cache_pieces
+from .study import WITHIN, add_files, add_question, add_running, asked_range, asked_requirement
 
 if TYPE_CHECKING:
     from ..history.setup import Setup
@@ -36,52 +36,15 @@ EXAMPLE = "levelnet escape setup.toml --within 0.001 --between 200 1600 --plot f
 
 def add_arguments(parser: argparse.ArgumentParser) -> None:
     """Declare the options of this command."""
-    parser.add_argument("setup", metavar="SETUP", type=Path, help="setup file (TOML)")
-    parser.add_argument(
-        "-o",
-        "--output",
-        metavar="FILE",
-        type=Path,
-        help="result file (default: name of the setup with -escape.h5, in the current folder)",
-    )
+    add_files(parser, "-escape.h5")
     parser.add_argument(
         "--order",
         metavar="NAME,NAME,...",
         help="switches in the order in which they are added (default: stimulated,absorption,"
         "feedback,excited_two_photon,raman,scattering)",
     )
-    parser.add_argument(
-        "--within",
-        metavar="ERROR",
-        type=float,
-        default=WITHIN,
-        help=f"relative error of x_e that the verdict allows (default: {WITHIN:g})",
-    )
-    parser.add_argument(
-        "--between",
-        metavar=("LOW", "HIGH"),
-        nargs=2,
-        type=float,
-        help="redshifts between which it allows it; the outputs of the setup must cover them "
-        "(default: as much of 200 to 1600 as they cover)",
-    )
-    parser.add_argument(
-        "--requirement",
-        metavar="FILE",
-        type=Path,
-        help="accuracy that is asked (TOML): also say which treatment meets it",
-    )
-    parser.add_argument("--plot", metavar="FOLDER", type=Path, help="write figures into FOLDER")
-    parser.add_argument(
-        "--workers",
-        metavar="N",
-        type=int,
-        help="processes that run variants (default: as many as there are processors)",
-    )
-    parser.add_argument(
-        "--no-cache", action="store_true", help="neither read nor fill the cache of reductions"
-    )
-    parser.add_argument("--force", action="store_true", help="overwrite result and figures")
+    add_question(parser, "treatment")
+    add_running(parser, "variants")
 
 
 def run(options: argparse.Namespace, console: Console) -> int:

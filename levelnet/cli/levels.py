@@ -15,6 +15,7 @@ from .level_output import level_summary, level_values
 from .output import print_result, size_text, time_text
 from .paths import check_folder, check_target
 from .solve import cache_pieces
+from .study import WITHIN, add_files, add_question, add_running, asked_range, asked_requirement
 
 if TYPE_CHECKING:
     from ..history.setup import Setup
@@ -33,19 +34,11 @@ DESCRIPTION = (
 )
 EXAMPLE = "levelnet levels setup.toml --rungs 20,30,45,70,100,140,200 --plot figures"
 _LONG_S = 10.0  # above it the cost is announced before the work starts
-WITHIN = 1e-3
 
 
 def add_arguments(parser: argparse.ArgumentParser) -> None:
     """Declare the options of this command."""
-    parser.add_argument("setup", metavar="SETUP", type=Path, help="setup file (TOML)")
-    parser.add_argument(
-        "-o",
-        "--output",
-        metavar="FILE",
-        type=Path,
-        help="result file (default: name of the setup with -levels.h5, in the current folder)",
-    )
+    add_files(parser, "-levels.h5")
     parser.add_argument(
         "--rungs",
         metavar="N,N,...",
@@ -57,38 +50,8 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
         metavar="L,L,...",
         help="also run the longest rung with levels resolved in l up to these n only",
     )
-    parser.add_argument(
-        "--within",
-        metavar="ERROR",
-        type=float,
-        default=WITHIN,
-        help=f"relative error of x_e that the verdict allows (default: {WITHIN:g})",
-    )
-    parser.add_argument(
-        "--between",
-        metavar=("LOW", "HIGH"),
-        nargs=2,
-        type=float,
-        help="redshifts between which it allows it; the outputs of the setup must cover them "
-        "(default: as much of 200 to 1600 as they cover)",
-    )
-    parser.add_argument(
-        "--requirement",
-        metavar="FILE",
-        type=Path,
-        help="accuracy that is asked (TOML): also say which n_max meets it",
-    )
-    parser.add_argument("--plot", metavar="FOLDER", type=Path, help="write figures into FOLDER")
-    parser.add_argument(
-        "--workers",
-        metavar="N",
-        type=int,
-        help="processes that run rungs (default: as many as there are processors)",
-    )
-    parser.add_argument(
-        "--no-cache", action="store_true", help="neither read nor fill the cache of reductions"
-    )
-    parser.add_argument("--force", action="store_true", help="overwrite result and figures")
+    add_question(parser, "n_max")
+    add_running(parser, "rungs")
 
 
 def run(options: argparse.Namespace, console: Console) -> int:
@@ -126,32 +89,6 @@ def run(options: argparse.Namespace, console: Console) -> int:
         console.error(f"{study.outcome.name}: {study.outcome.value}", kind="")
         return 1
     return 0
-
-
-def asked_requirement(path: Path | None, setup: Setup) -> Requirement | None:
-    """Read a requirement; what the outputs of the setup cannot answer is refused at once."""
-    if path is None:
-        return None
-    from ..history.integrate import output_redshifts
-    from ..studies.level_requirement import check_covered
-    from ..studies.requirement import load_requirement
-
-    requirement = load_requirement(path)
-    check_covered(requirement, output_redshifts(setup))
-    return requirement
-
-
-def asked_range(setup: Setup, options: argparse.Namespace) -> tuple[float, float]:
-    """The range that the verdict is about, inside the outputs of the setup."""
-    from ..history.integrate import output_redshifts
-    from ..studies.level_checks import covered
-    from ..studies.rung import study_setup
-    from ..studies.verdict import outputs_between
-
-    outputs = output_redshifts(setup)
-    low, high = covered(outputs) if options.between is None else options.between
-    outputs_between(output_redshifts(study_setup(setup, (low, high))), options.within, low, high)
-    return low, high
 
 
 def whole_numbers(option: str, text: str) -> tuple[int, ...]:

@@ -124,6 +124,7 @@ def distilled_values(history: FastHistory, setup: Setup | None) -> dict[str, Any
         "n_steps": history.n_steps,
         "n_rejected": history.n_rejected,
         "frequency_error": history.frequency_error,
+        "notes": list(history.notes),
         "observables": None
         if seen is None
         else {
@@ -173,4 +174,5 @@ def distilled_summary(history: FastHistory) -> str:
     if history.field is not None:
         error = f"{history.frequency_error:.1e} in x_e from the frequency step"
         how.append(row("field", f"{len(history.field.redshift)} spectra; {error}"))
+    how += [row("note", text) for text in history.notes]
     return "\n".join([*lines, "", *aligned([head, *body], right=True), "", *how])

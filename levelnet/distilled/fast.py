@@ -76,6 +76,8 @@ class FastHistory:
         The radiation field, where the line treatment resolves it.
     frequency_error : float, dimensionless
         Largest relative change of x_e on a frequency grid twice as coarse; 0 without a field.
+    notes : tuple of str
+        What the line treatment leaves out, and how the field was counted.
     """
 
     outcome: Outcome
@@ -92,6 +94,7 @@ class FastHistory:
     sensitivities: Sensitivities | None = None
     field: RadiationField | None = None
     frequency_error: float = 0.0
+    notes: tuple[str, ...] = ()
 
     def __post_init__(self) -> None:
         """Check shapes and make every array read-only."""

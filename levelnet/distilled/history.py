@@ -15,6 +15,7 @@ from ..background.cosmology import Cosmology
 from ..background.parameters import COSMOLOGICAL
 from ..background.quadrature import Quadrature
 from ..errors import InputError, Outcome, RangeError, SolveError
+from ..escape.left_out import left_out
 from ..escape.lines import Lines
 from ..kernels.effective import (
     NO_START,
@@ -156,15 +157,15 @@ def history_from_table(  # noqa: PLR0913 (each is a choice of the caller)
     grid = table_quadrature(atom, cosmology, float(outputs[-1])) if wanted else None
     run = _run(atom, cosmology, outputs, grid, drive, relative)
     if grid is None:
-        return _assemble(cosmology, redshift, run, None, None)
+        return _assemble(cosmology, redshift, run, None, None, left_out(chosen))
     seen, slopes = observe_run(
         cosmology, grid, run.grid_state, run.grid_slope, drive, scales(physics).thomson
     )
     if drive is None:
-        return _assemble(cosmology, redshift, run, seen, None)
+        return _assemble(cosmology, redshift, run, seen, None, left_out(chosen))
     names = (*COSMOLOGICAL, *CONSTANTS, *(f"ln {name}" for name in rate_names(table)))
     found = _sensitivities(cosmology, redshift, run, drive, names, slopes)
-    return _assemble(cosmology, redshift, run, seen, found)
+    return _assemble(cosmology, redshift, run, seen, found, left_out(chosen))
 
 
 def _redshifts(table: EffectiveTable, asked: ArrayLike | None) -> FloatArray:
@@ -265,6 +266,7 @@ def _assemble(
     run: Run,
     seen: Observables | None,
     found: Sensitivities | None,
+    notes: tuple[str, ...],
 ) -> FastHistory:
     ionized, neutral = fractions(run.state[:, 0])
     radiation = cosmology.cmb_temperature_k * (1.0 + redshift)
@@ -281,6 +283,7 @@ def _assemble(
         int(run.report[3]),
         seen,
         found,
+        notes=notes,
     )
 
 

@@ -13,9 +13,11 @@ from ..background.cosmology import Cosmology
 from ..background.last_scattering import ionized_redshift, observe
 from ..background.quadrature import quadrature
 from ..errors import SolveError
+from ..escape.left_out import left_out
 from ..escape.lines import Lines
 from ..history.course import Course, electron_fraction_at, state_at
 from ..history.integrate import handover_of, march_field, slow_equations
+from ..history.limits import field_notes
 from ..history.setup import Accuracy, Grid, Setup
 from .fast import FastHistory, fractions
 from .kept import check_kept
@@ -98,12 +100,18 @@ def history_with_field(
         radiation_k * np.exp(state[:, 1]),
         radiation_k,
         handover.redshift,
-        len(run.trajectory.time) - 1,
+        run.steps,
         0,
         _observables(setup, course, float(redshift[-1])) if observables else None,
         None,
         run.field,
         run.frequency_error,
+        (
+            *left_out(setup.lines),
+            *field_notes(run.frequency_step, run.frequency_error),
+            f"field: frequency step {run.frequency_step:.3g}; in a step photons are off by at most "
+            f"{run.photon_number_error:.1e}, atoms by {run.atom_number_error:.1e}, relative",
+        ),
     )
 
 

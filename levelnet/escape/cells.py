@@ -148,4 +148,5 @@ def _rates_in_cells(
             values = spectrum(n, l, energy_ev) * energy_ev / const.PLANCK_EV_S
             rates[place] += (values * half) @ weights
     rates[(np.rint(poles[poles < number[-1] + 0.5]) - lowest).astype(int)] = 0.0
+    rates.flags.writeable = False  # all who ask again get the same array
     return rates

@@ -12,7 +12,7 @@ COLDEST_FIELD_K = 55.0
 _ERROR_PER_STEP2 = 350.0
 # The step is chosen for this many times the accuracy of the integration, which lies far below that
 # of the physics; a step asked for is refused above so many times.
-_CHOSEN, _REFUSED = 10.0, 1e4
+_CHOSEN, _REFUSED = 10.0, 1.1e3
 _FINEST, _COARSEST = 5e-5, 1e-3
 # Lyman lines nearer to each other than this many cells are not resolved: the grid ends below them.
 _APART = 4.0

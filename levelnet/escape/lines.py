@@ -10,7 +10,7 @@ RAMAN_LEVELS = ((2, 0), (3, 0), (3, 2))
 """(n, l) of the levels with Raman scattering; higher ones have far smaller populations."""
 TWO_PHOTON_N_MAX = 10
 """Highest n of ns and nd levels whose two-photon spectra are known."""
-COARSEST_STEP = 0.01
+COARSEST_STEP = 0.002
 """Widest frequency step: a line and the next one up must stay many cells apart."""
 
 
@@ -27,15 +27,16 @@ class Transfer:
     Parameters
     ----------
     feedback : bool
-        Photons that leave a higher Lyman line travel down to the lines below. False: what lies
-        redward of a line above Lyman-alpha is a blackbody again.
+        Photons that leave a higher Lyman line travel down to the lines below. False: lines above
+        Lyman-alpha are isolated: each sees a blackbody, its photons are forgotten, and those of
+        other processes pass it.
     excited_two_photon : bool
         Two-photon decay of ns and nd, n >= 3, and its inverse, outside the lines themselves.
     raman : bool
         Raman scattering from 2s, 3s and 3d, and its inverse, outside the lines themselves.
     scattering : bool
         Resonance scattering in the wings of Lyman-alpha: diffusion with recoil.
-    frequency_step : float, 1e-5 to 0.01 (dimensionless), or None
+    frequency_step : float, 1e-5 to 0.002 (dimensionless), or None
         d ln nu of a cell of the grid; None: as the asked accuracy needs it.
     highest_two_photon_n : int, 3 to 10
         Highest n of the levels in `excited_two_photon`.
@@ -112,19 +113,6 @@ class Lines:
             )
         if self.transfer is not None:
             raise ValueError('transfer: only with hydrogen = "transfer"')
-
-    @property
-    def field_resolves(self) -> tuple[str, ...]:
-        """What a resolved field gives that is missing from isolated lines."""
-        choice = self.transfer
-        if choice is None:
-            return ()
-        given = {
-            "wings": choice.excited_two_photon,
-            "scattering": choice.scattering,
-            "feedback": choice.feedback,
-        }
-        return tuple(name for name, on in given.items() if on)
 
     @property
     def field_levels(self) -> tuple[tuple[int, int], ...]:

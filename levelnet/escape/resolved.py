@@ -38,8 +38,6 @@ class FieldRecord:
         ln of the distortion on the blue and the red side of each line.
     decay_per_s : float, s^-1
         Spontaneous 2s-1s rate where that decay goes through the field, else 0.
-    resolves : tuple of str
-        What the field took part in, of "wings", "scattering", "feedback".
     """
 
     radiation_temperature_k: FloatArray
@@ -47,7 +45,6 @@ class FieldRecord:
     source: FloatArray
     log_sides: FloatArray
     decay_per_s: float
-    resolves: tuple[str, ...]
 
     def __post_init__(self) -> None:
         """Check shapes and make every array read-only."""
@@ -74,7 +71,7 @@ class ResolvedField(Sobolev):
     ----------
     loss, source, log_sides : CubicSpline or None
         Of the record, over -ln T_r.
-    decay_per_s, resolves : float (s^-1), tuple of str
+    decay_per_s : float, s^-1
         As in the record.
     """
 
@@ -82,9 +79,11 @@ class ResolvedField(Sobolev):
     source: CubicSpline | None = None
     log_sides: CubicSpline | None = None
     decay_per_s: float = 0.0
-    resolves: tuple[str, ...] = ()
 
     name: ClassVar[str] = "transfer"
+    # What its switches leave out is said by published sizes (`escape/left_out.py`): in a field that
+    # holds other sources beside the lines, figures of isolated lines mean nothing.
+    resolves: ClassVar[tuple[str, ...]] = ("wings", "scattering", "feedback")
     assumes: ClassVar[tuple[str, ...]] = (
         "Occupation numbers of the resolved photons are far below 1 (Wien).",
         "Inside half a cell of a line the field is that of the line's own levels.",
@@ -106,7 +105,6 @@ class ResolvedField(Sobolev):
             record.spline(record.source),
             record.spline(record.log_sides),
             record.decay_per_s,
-            record.resolves,
         )
 
     def couple(

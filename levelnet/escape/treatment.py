@@ -92,7 +92,8 @@ class LineTreatment(Protocol):
 
         The slopes of K by ln(n_1s/H) and ln T_r must be exact: the implicit step rests on them.
         `validity` may hold "optical_depth" and "escape_probability" per line, and "log_blue_side"
-        and "log_red_side" where the treatment has a field of its own.
+        and "log_red_side" where the treatment has a field of its own. One that `sees_blue_side`
+        must give the depth: what a line sends down follows from it.
         """
         ...
 

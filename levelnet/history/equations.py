@@ -27,6 +27,7 @@ from ..atomic.two_photon import stimulated_two_photon_factor
 from ..background.conditions import Conditions
 from ..background.cosmology import Cosmology
 from ..background.matter import compton_rate_per_s
+from ..errors import InputError
 from ..escape.blue_side import BlueSide, Past, log_red_side
 from ..escape.treatment import LineTreatment, ResonanceLines
 from ..escape.two_photon import with_two_photon
@@ -195,8 +196,14 @@ class SlowEquations:
         if self.past is None:
             return
         here = self.local(log_scale, state)
+        depth = here.coupling.validity.get("optical_depth")
+        if depth is None:
+            raise InputError(
+                f'line treatment "{self.treatment.name}": it sees_blue_side, so validity must hold '
+                '"optical_depth", one value per open line'
+            )
         blue = self.past.blue_side(log_scale, 0.0).log_distortion
-        red = log_red_side(*self.line_state(here), here.coupling.validity["optical_depth"], blue)
+        red = log_red_side(*self.line_state(here), depth, blue)
         self.past.remember(log_scale, red)
 
     def line_state(self, here: Local) -> tuple[FloatArray, FloatArray]:

@@ -1,7 +1,6 @@
 """A run whose radiation field is resolved in frequency: one march of field, levels and ionization.
 
-The interior of the atom is sampled along a reference history (Sobolev, which fixes T_m to a few
-1e-4), so that the march itself needs no network: recombination follows the true T_m by its slope.
+The march itself needs no network (`history/march_path.py`).
 """
 
 from __future__ import annotations
@@ -13,10 +12,8 @@ from typing import NamedTuple
 import numpy as np
 from scipy.interpolate import CubicSpline
 
-from .. import constants as const
-from ..arrays import FloatArray, IntArray
+from ..arrays import FloatArray
 from ..atomic.physics import scales
-from ..background.matter import compton_rate_per_s
 from ..errors import Outcome, SolveError
 from ..escape.cells import frequency_cells
 from ..escape.frequency_step import fitted_step
@@ -25,21 +22,18 @@ from ..kernels import transfer as kernel
 from ..kernels.transfer import Cells, Path, Room, Track
 from ..numerics.stepping import Trajectory
 from .equations import SlowEquations
+from .march_path import make_path
 from .result import RadiationField
 from .setup import Setup
 
-# Distance in ln a of the samples of the interior: cubic pieces are then good to 1e-9.
-_SPACING = 0.004
 # ln a between records of what the field does, and between points of the trajectory; both are
 # interpolated in between.
 _RECORD, _POINTS = 1e-3, 2e-3
 _MOST_SPECTRA = 50
 _MOST_ITERATIONS = 20
-# With fewer there is nothing to return.
-_FEWEST_STEPS = 3
+_FEWEST_RECORDS = 4  # for a cubic spline
 # Of the change of x_HI in a step.
 _TOLERANCE = 1e-9
-_NEVER = -700.0
 
 
 class FieldRun(NamedTuple):
@@ -54,7 +48,8 @@ class FieldRun(NamedTuple):
     field : RadiationField
         Spectra.
     frequency_step, frequency_error : float, dimensionless
-        d ln nu, and the largest relative change of x_e at the outputs on a grid twice as coarse.
+        d ln nu, and the largest relative change of x_e on a grid twice as coarse; infinite where
+        the march on that grid ended early.
     photon_number_error, atom_number_error : float, dimensionless
         Largest relative imbalance in any step.
     steps : int
@@ -116,94 +111,13 @@ def make_room(cells: Cells) -> Room:
     )
 
 
-def make_path(
-    equations: SlowEquations, reference: Trajectory, start: float, end: float, decay: bool
-) -> Path:
-    """Sample the background and the interior from `start` to `end` in ln a.
-
-    Parameters
-    ----------
-    equations : SlowEquations
-        Cosmology, interior, 2s-1s rate.
-    reference : Trajectory
-        Its v gives the T_m to sample at.
-    start, end : float
-        ln a.
-    decay : bool
-        Whether 2s decays to the ground state beside the field.
-    """
-    count = max(8, math.ceil((end - start) / _SPACING)) + 1
-    nodes = np.linspace(start, end, count)
-    lag = CubicSpline(reference.time, reference.state[:, 1])(nodes)
-    lower, upper = np.triu_indices(len(equations.reduced.kept), 1)
-    stored = np.array(
-        [_sample(equations, s, v, lower, upper, decay) for s, v in zip(nodes, lag, strict=True)]
-    )
-    series = CubicSpline(nodes, stored).c.transpose(1, 0, 2)
-    kept, cosmology, lines = equations.reduced.kept, equations.cosmology, equations.lines
-    today, helium = cosmology.cmb_temperature_k, cosmology.helium_ratio()
-    compton = float(compton_rate_per_s(today, 1.0, helium)) * (2.0 + helium)
-    return Path(
-        start,
-        float(nodes[1] - nodes[0]),
-        np.ascontiguousarray(series),
-        lower,
-        upper,
-        kept.statistical_weight / 2.0,
-        kept.energy_ev,
-        const.BOLTZMANN_EV_K * today,
-        float(cosmology.hydrogen_density_cm3(0.0)),
-        helium,
-        compton * equations.scales.compton_rate,
-        8.0 * math.pi / float(lines.wavelength_cm[0]) ** 3,
-        _scattering_unit(float(lines.einstein_a_per_s[0]), float(lines.energy_ev[0])),
-    )
-
-
-def _scattering_unit(einstein_a_per_s: float, energy_ev: float) -> float:
-    """Diffusion in ln nu at unit distance from Lyman-alpha over n_1s k T_m, in cm^3 s^-1 eV^-1.
-
-    n_1s c sigma k T_m/(m_H c^2), with sigma = (3 lambda^2/8 pi) A phi of the coherent part in the
-    Lorentz wing, phi = (A/4 pi^2)/(nu - nu_0)^2.
-    """
-    wavelength_cm = const.PLANCK_EV_S * const.SPEED_OF_LIGHT_CM_S / energy_ev
-    frequency_hz = energy_ev / const.PLANCK_EV_S
-    cross_section = 3.0 * wavelength_cm**2 / (8.0 * math.pi)
-    wing = (einstein_a_per_s / (2.0 * math.pi * frequency_hz)) ** 2
-    rest_ev = const.HYDROGEN_ATOM_MASS_G * const.SPEED_OF_LIGHT_CM_S**2
-    rest_ev *= const.BOLTZMANN_EV_K / const.BOLTZMANN_ERG_K
-    return const.SPEED_OF_LIGHT_CM_S * cross_section * wing / rest_ev
-
-
-def _sample(
-    equations: SlowEquations, time: float, lag: float, lower: IntArray, upper: IntArray, decay: bool
-) -> FloatArray:
-    around = equations.background(time)
-    radiation_k, kept = around.radiation_temperature_k, equations.reduced.kept
-    rates = equations.reduced.rates(radiation_k, radiation_k * math.exp(lag))
-    kt = const.BOLTZMANN_EV_K * radiation_k
-    lift = rates.log_photoionization + np.log(kept.statistical_weight / 2.0) - kept.energy_ev / kt
-    down = rates.exchange[upper, lower]
-    two_photon = _NEVER
-    if decay and equations.two_photon_rate_per_s > 0.0:
-        two_photon = math.log(equations.decay_rate_per_s(radiation_k))
-    return np.concatenate(
-        [
-            np.log(rates.recombination),
-            rates.recombination_slope_matter,
-            lift,
-            np.log(np.maximum(down, math.exp(_NEVER))),
-            [math.log(around.hubble_rate_per_s), lag, two_photon],
-        ]
-    )
-
-
 def march(
     cells: Cells, path: Path, start: float, state: FloatArray, end: float, spectra: FloatArray
 ) -> Marched:
-    """March from equilibrium at `start` to `end` in ln a, keeping the field near `spectra`."""
-    n_steps = math.ceil((end - start) / cells.step)
+    """March from equilibrium at `start` past `end` in ln a, keeping the field near `spectra`."""
     stride = max(1, round(_RECORD / cells.step))
+    # So far beyond that the last record is: K and s change by per cents from one to the next.
+    n_steps = math.ceil((end - start) / cells.step) + stride
     n_records = (n_steps - 1) // stride + 1
     n, n_lines = len(path.weight_ratio), len(cells.line_cell)
     wanted = np.clip(np.rint((spectra - start) / cells.step), 1, n_steps).astype(np.int64)
@@ -220,10 +134,10 @@ def march(
         cells, path, first, stride, wanted, _TOLERANCE, _MOST_ITERATIONS, make_room(cells), track
     )
     if status == kernel.SINGULAR:
-        raise SolveError(Outcome.SINGULAR.value)
-    done = int(track.report[0])
-    outcome = Outcome.CONVERGED if status == kernel.DONE else Outcome.STEP_TOO_SMALL
-    if done < _FEWEST_STEPS:
+        raise SolveError(Outcome.SINGULAR.value, outcome=Outcome.SINGULAR)
+    done = int(track.report[kernel.STEPS])
+    outcome = Outcome.CONVERGED if status == kernel.DONE else Outcome.FIELD_NOT_SETTLED
+    if done <= _FEWEST_RECORDS * stride:
         raise SolveError(outcome.value, outcome=outcome)
     step = np.arange(done + 1, dtype=float)
     return Marched(
@@ -253,12 +167,12 @@ def resolve_field(
     reference : Trajectory
         Their solution from the start down to the last output, or nearly.
     redshift : ndarray, shape (n_redshift,), dimensionless
-        Output redshifts, descending.
+        Output redshifts, descending, the last well below the start.
     """
     start, state = float(reference.time[0]), reference.state[0]
     outputs = -np.log1p(redshift)
     outputs = outputs[outputs > start]
-    end = float(outputs[-1]) if len(outputs) else start + 10.0 * _POINTS
+    end = float(outputs[-1])
     asked = setup.frequency_step
     path = make_path(
         equations,
@@ -267,16 +181,10 @@ def resolve_field(
         end,
         setup.lines.two_photon != "distorted",
     )
-    fine, coarse = (
+    (cells, marched), (_, coarse) = (
         _march(setup, equations, path, state, end, step, outputs) for step in (asked, 2.0 * asked)
     )
-    cells, marched = fine
     points = _points(marched, outputs)
-    shared = points[points <= coarse[1].time[-1]]
-    there, less = (
-        1.0 / (1.0 + np.exp(-CubicSpline(one.time, one.state[:, 0])(shared)))
-        for one in (marched, coarse[1])
-    )
     recorded = replace(
         equations,
         treatment=ResolvedField.of(_record(setup, equations, marched)),
@@ -287,11 +195,21 @@ def resolve_field(
         _trajectory(marched, points),
         _field(equations, cells, marched),
         cells.step,
-        float(np.max(np.abs(there / less - 1.0))),
-        float(marched.track.report[2]),
-        float(marched.track.report[3]),
+        _frequency_error(marched, coarse, points),
+        float(marched.track.report[kernel.PHOTON_ERROR]),
+        float(marched.track.report[kernel.ATOM_ERROR]),
         len(marched.time) - 1,
     )
+
+
+def _frequency_error(fine: Marched, coarse: Marched, points: FloatArray) -> float:
+    if not coarse.outcome.ok:
+        return math.inf
+    there, less = (
+        1.0 / (1.0 + np.exp(-CubicSpline(one.time, one.state[:, 0])(points)))
+        for one in (fine, coarse)
+    )
+    return float(np.max(np.abs(there / less - 1.0)))
 
 
 def _march(
@@ -312,7 +230,9 @@ def _march(
         setup.two_photon_rate_per_s,
         factor.two_photon_rate,
     )
-    wanted = outputs[:: max(1, math.ceil(len(outputs) / _MOST_SPECTRA))]
+    # Evenly over the outputs, the first and the last among them.
+    count = min(len(outputs), _MOST_SPECTRA)
+    wanted = outputs[np.unique(np.linspace(0, len(outputs) - 1, count).round().astype(int))]
     return cells, march(cells, path, path.start, state, end, wanted)
 
 
@@ -323,14 +243,17 @@ def _points(marched: Marched, outputs: FloatArray) -> FloatArray:
     last = float(reached[-1]) if len(reached) else end
     between = np.linspace(start, last, max(8, math.ceil((last - start) / _POINTS)) + 1)
     # Neither doubled nor nearly so.
-    apart = np.min(np.abs(np.subtract.outer(between, reached)), axis=1, initial=np.inf)
-    points: FloatArray = np.union1d(between[apart > 0.05 * _POINTS], [start, *reached])
+    near = 0.05 * _POINTS
+    alone = np.searchsorted(reached, between - near) == np.searchsorted(reached, between + near)
+    points: FloatArray = np.union1d(between[alone], [start, *reached])
     return points
 
 
 def _trajectory(marched: Marched, points: FloatArray) -> Trajectory:
     state = CubicSpline(marched.time, marched.state)(points)
-    return Trajectory(points, state, marched.outcome, 0, int(marched.track.report[1]))
+    return Trajectory(
+        points, state, marched.outcome, 0, int(marched.track.report[kernel.ELIMINATIONS])
+    )
 
 
 def _record(setup: Setup, equations: SlowEquations, marched: Marched) -> FieldRecord:
@@ -343,7 +266,6 @@ def _record(setup: Setup, equations: SlowEquations, marched: Marched) -> FieldRe
         track.source[:count],
         log_distortion(track.sides[:count], lines.energy_ev[:, None], radiation_k[:, None, None]),
         equations.two_photon_rate_per_s if through_field else 0.0,
-        setup.lines.field_resolves,
     )
 
 

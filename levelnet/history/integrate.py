@@ -10,7 +10,7 @@ import numpy as np
 
 from ..arrays import FloatArray
 from ..atomic.physics import scales
-from ..errors import SolveError
+from ..errors import InputError, SolveError
 from ..escape.blue_side import Past
 from ..escape.family import treatment as member
 from ..escape.resolved import ResolvedField
@@ -92,6 +92,11 @@ def integrate_history(
     chosen = line_treatment or member(setup.lines.hydrogen)
     handover = setup_handover(setup, chosen)
     resolved = isinstance(chosen, ResolvedField)
+    if resolved != (setup.lines.transfer is not None):
+        raise InputError(
+            'line_treatment: lines.hydrogen = "transfer" goes with the field resolved in frequency '
+            "alone, and that with no other; give the setup another treatment"
+        )
     if start_above > handover.redshift and not resolved:
         handover = Handover(start_above, handover.departure)
     ladder = build_ladder(setup, keeps=(*chosen.keeps, *setup.lines.field_levels, *keeps))
@@ -151,10 +156,9 @@ def march_field(
     SolveError
         If the integration without the field, or the march, cannot be done.
     """
-    accuracy = replace(setup.accuracy, relative=max(setup.accuracy.relative, _REFERENCE))
-    rough = replace(setup, accuracy=accuracy)
+    relative = max(setup.accuracy.relative, _REFERENCE)
     redshift = _march_redshifts(handover, redshift)
-    reference = integrate_slow(rough, equations, handover, redshift, lambda *_: None)
+    reference = integrate_slow(setup, equations, handover, redshift, lambda *_: None, relative)
     if not reference.outcome.ok:
         raise SolveError(reference.outcome.value, outcome=reference.outcome)
     tell("radiation field", 0.0)
@@ -278,8 +282,9 @@ def integrate_slow(
     handover: Handover,
     redshift: FloatArray,
     tell: Progress,
+    relative: float | None = None,
 ) -> Trajectory:
-    """Integrate from the hand-over to the last output."""
+    """Integrate from the hand-over to the last output; `relative` in place of the setup's."""
     start = -math.log1p(handover.redshift)
     state, _ = equilibrium_state(equations, start)
     outputs = [s for s in (-np.log1p(redshift)).tolist() if s > start]
@@ -297,7 +302,7 @@ def integrate_slow(
         start,
         state,
         outputs,
-        _LOCAL * setup.accuracy.relative,
+        _LOCAL * (relative or setup.accuracy.relative),
         first_step=1e-3,
         max_steps=setup.accuracy.max_steps,
         on_step=on_step,

@@ -44,6 +44,21 @@ _ERRORS = (
 )
 
 
+LARGEST_FREQUENCY_ERROR = 1e-4
+"""Of x_e, from the frequency step of a resolved field: a tenth of :data:`LARGEST_X_E_ERROR`. The
+default step stays below it with any choice of switches."""
+
+
+def field_notes(step: float, error: float) -> tuple[str, ...]:
+    """Warn where the frequency step of a field is coarse; both dimensionless."""
+    if error <= LARGEST_FREQUENCY_ERROR:
+        return ()
+    return (
+        f"warning: frequency_step = {step:.2g}: x_e changes by {error:.1e} from a grid twice as "
+        f"coarse (limit {LARGEST_FREQUENCY_ERROR:g}), and may be off by as much",
+    )
+
+
 def limit_notes(
     redshift: FloatArray,
     neutral_per_electron: FloatArray,

@@ -21,7 +21,8 @@ class LineFigures:
     optical_depth : ndarray
         Sobolev optical depth.
     escape_probability : ndarray
-        Chance that a photon of the line escapes, as the treatment has it.
+        Chance that a photon of the line escapes, as the treatment has it; in a field resolved in
+        frequency that of its one cell, as if alone (Sobolev).
     share : ndarray
         Part of the net flow to the ground state; with 2s-1s, and whatever other level the treatment
         sends down, the shares sum to 1.
@@ -57,7 +58,13 @@ class LineFigures:
         ln u on either side of the line, u the photon occupation over that of the blackbody at T_r.
     unseen_feedback : ndarray
         What the next open line above sends down and the treatment leaves out, over what drives the
-        net flow of this line.
+        net flow of this line; 0 where the treatment feeds the line.
+
+    Notes
+    -----
+    In a field resolved in frequency a line is one cell, and its share what crosses it: where
+    two-photon wings take over, shares of a line and of the s and d levels that share its wings
+    depend on the step one by one (not x_e, nor their sum).
     """
 
     names: tuple[str, ...]

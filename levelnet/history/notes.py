@@ -2,8 +2,9 @@
 
 from __future__ import annotations
 
+from ..escape.family import TREATMENTS
+from ..escape.left_out import left_out
 from ..escape.treatment import LineTreatment
-from ..escape.two_photon import STIMULATED_NOTE
 from .setup import Setup
 
 # Overridden rates that the notes list one by one; the setup holds all.
@@ -32,7 +33,9 @@ def notes_of(
     notes = [
         "helium is neutral and inert: x_e misses its electrons above z ~ 1600, where they count",
         "excited levels are quasi-steady; there are no collisions and no reionization",
-        f'lines: "{chosen.name}" ({type(chosen).__module__}.{type(chosen).__qualname__})',
+        f'lines: "{chosen.name}"'
+        if type(chosen) in {type(one) for one in TREATMENTS}
+        else "lines: by a treatment of one's own, which no file names",
     ]
     top, n_max = setup.hydrogen.highest_resolved, setup.hydrogen.n_max
     if top < n_max:
@@ -44,8 +47,7 @@ def notes_of(
     notes += [f"lines assume: {text}" for text in chosen.assumes]
     notes += [f"lines hold for: {text}" for text in chosen.holds_for]
     notes += warnings
-    if setup.lines.two_photon == "stimulated":
-        notes.append(STIMULATED_NOTE)
+    notes += left_out(setup.lines)
     table = setup.rates.table
     notes += [f"rate overridden: {one.text} ({one.source})" for one in table[:_NOTED]]
     if len(table) > _NOTED:

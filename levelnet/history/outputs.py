@@ -29,7 +29,7 @@ from ..numerics.stepping import Trajectory
 from .course import electron_fraction_at, state_at
 from .equations import ionized_and_neutral
 from .integrate import Integrated, Progress
-from .limits import limit_notes
+from .limits import field_notes, limit_notes
 from .local import Local
 from .notes import notes_of
 from .observables import milestones, optical_depth
@@ -83,6 +83,8 @@ def assemble_history(setup: Setup, integrated: Integrated, tell: Progress) -> Hi
     )
     chosen = integrated.equations.treatment
     warnings = limit_notes(redshift, ground / electron_fraction, figures, chosen)
+    if integrated.field is not None:
+        warnings += field_notes(integrated.field.frequency_step, integrated.field.frequency_error)
     return History(
         setup,
         outcome,

@@ -173,7 +173,8 @@ class Diagnostics:
     frequency_step : float
         Step of the radiation field in ln(photon energy); 0 where there is none.
     frequency_error : float
-        Relative error of x_e that this step leaves, an estimate; 0 where there is none.
+        Relative error of x_e that this step leaves, an estimate; 0 where there is none, infinite
+        where the coarser march behind it failed.
     """
 
     handover_redshift: float

@@ -96,6 +96,7 @@ def line_figures(
     equations, lines = integrated.equations, integrated.equations.lines
     times = -np.log1p(redshift)
     slope = _source_slopes(integrated, steps, times)
+    fed = "feedback" in getattr(equations.treatment, "resolves", ())
     sent = _sent_from_above(integrated, steps, times)
     columns: dict[str, list[FloatArray]] = {}
     for k, (here, lost) in enumerate(zip(moments, lost_per_s, strict=True)):
@@ -115,7 +116,7 @@ def line_figures(
             "source_change": widths.thick_width_absorption * np.abs(slope[k]),
             "log_blue_side": blue,
             "log_red_side": red,
-            "unseen_feedback": unseen_feedback(sent[k], blue, source),
+            "unseen_feedback": 0.0 * blue if fed else unseen_feedback(sent[k], blue, source),
         }
         for name, value in one.items():
             columns.setdefault(name, []).append(value)

@@ -28,6 +28,10 @@ FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
 
 DONE, SINGULAR, NOT_CONVERGED = 0, 1, 2
+# Places in the series of a `Path`, after what it holds of levels and pairs.
+LOG_HUBBLE, LOG_LAG, LOG_DECAY = -3, -2, -1
+# Places in the report of a `Track`.
+STEPS, ELIMINATIONS, PHOTON_ERROR, ATOM_ERROR = 0, 1, 2, 3
 # Exchange with the neighbours in one step above which the mean of a cell leans to its end, so that
 # the field does not ring for long. Leaning is of first order: at 30 it was worth 3e-5 in x_e on any
 # grid, at 1000 less than 1e-6.
@@ -443,8 +447,9 @@ class Path(NamedTuple):
     series : ndarray, shape (n_pieces, 4, n_stored)
         Cubic pieces in the distance from their lower node, highest power first, of: ln A_i at the
         reference T_m, its slope in ln T_m, ln of B_i x_B,i/x_1s, ln of the downward exchange of
-        each pair, then ln H, ln of the reference T_m over T_r, ln of the 2s-1s rate that does not
-        go through the field.
+        each pair; then, at `LOG_HUBBLE`, `LOG_LAG` and `LOG_DECAY`, ln H, ln of the reference T_m
+        over T_r, ln of the 2s-1s rate that does not go through the field. Beyond the nodes the last
+        piece goes on.
     lower, upper : ndarray of int, shape (n_pairs,)
         Pairs of kept levels.
     weight_ratio, energy_ev : ndarray, shape (n_kept,)
@@ -490,7 +495,8 @@ class Track(NamedTuple):
     spectra : ndarray, shape (n_spectra, n_cells)
         The field at the ends of the steps asked; packets stand at the upper edges of the cells.
     report : ndarray, shape (4,)
-        Steps done, elimination count, largest relative imbalance of photons and of atoms.
+        At `STEPS`, `ELIMINATIONS`, `PHOTON_ERROR` and `ATOM_ERROR`: steps done, elimination count,
+        largest relative imbalance of photons and of atoms.
     """
 
     state: FloatArray
@@ -649,11 +655,11 @@ def _flow(cells: Cells, path: Path, slow: Slow, room: Room, balance: Balance) ->
         source[i] = 0.0
         for k in range(n):
             loss[i, k] = 0.0
-    loss[0, 0] = math.exp(stored[-1])
+    loss[0, 0] = math.exp(stored[LOG_DECAY])
     couple_field(cells, _moment(path, slow), path.weight_ratio, room, loss, source)
     log_pairs = math.log(slow.hydrogen_cm3) + 2.0 * math.log(slow.electrons)
     for i in range(n):
-        log_capture = stored[i] + stored[n + i] * (slow.lag - stored[-2]) + log_pairs
+        log_capture = stored[i] + stored[n + i] * (slow.lag - stored[LOG_LAG]) + log_pairs
         log_lift = stored[2 * n + i] + math.log(slow.ground)
         departure[i] = source[i] - math.exp(log_capture) * math.expm1(log_lift - log_capture)
     matrix = balance.interior + loss
@@ -739,7 +745,7 @@ def _settle(
         miss = flow * cells.step / hubble - guess
         if abs(miss) <= limits[0] * max(abs(guess), 1e-9 * min(neutral, ionized)):
             return Attempt(guess, miss, slope, flow, slow, count + 1, True)
-        if count:
+        if count and guess != last_guess:  # equal where both were held inside the fractions
             slope = min((miss - last_miss) / (guess - last_guess), -1e-3)
         last_guess, last_miss = guess, miss
         guess -= miss / slope
@@ -757,7 +763,7 @@ def _record(
     track: Track,
 ) -> None:
     """Leave behind what one step did, and how well photons and atoms were counted."""
-    n, decay = balance.departure.shape[0], math.exp(balance.stored[-1])
+    n, decay = balance.departure.shape[0], math.exp(balance.stored[LOG_DECAY])
     if step % stride == 0:
         record = step // stride
         for i in range(n):
@@ -768,10 +774,11 @@ def _record(
         track.sides[record] = sides
     flow = max(abs(attempt.flow), 1e-300)
     missing = abs(gained + decay * balance.departure[0] - attempt.flow) / flow
-    track.report[0] = step + 1.0
-    track.report[1] += attempt.eliminations
-    track.report[2] = max(track.report[2], missing)
-    track.report[3] = max(track.report[3], abs(attempt.miss) / max(abs(attempt.gain), 1e-300))
+    track.report[STEPS] = step + 1.0
+    track.report[ELIMINATIONS] += attempt.eliminations
+    unsettled = abs(attempt.miss) / max(abs(attempt.gain), 1e-300)
+    track.report[PHOTON_ERROR] = max(track.report[PHOTON_ERROR], missing)
+    track.report[ATOM_ERROR] = max(track.report[ATOM_ERROR], unsettled)
 
 
 @kernel
@@ -827,7 +834,9 @@ def march(
         _interior(path, kt, balance.stored, balance.interior)
         hydrogen = path.hydrogen_cm3 * math.exp(-3.0 * middle)
         v = track.state[step, 1]
-        here = Slow(math.exp(balance.stored[-3]), hydrogen, kt, fractions[0], fractions[1], v)
+        here = Slow(
+            math.exp(balance.stored[LOG_HUBBLE]), hydrogen, kt, fractions[0], fractions[1], v
+        )
         guess = gains[0]
         if step > 5:  # as a cubic goes on
             guess = 4.0 * gains[0] - 6.0 * gains[1] + 4.0 * gains[2] - gains[3]

@@ -24,7 +24,6 @@ def _one(name: str, long_name: str, field: str) -> Variable:
     return Variable(name, (), "1", long_name, field, "int64")
 
 
-_CHANNEL = layout.CHANNELS.variables[1]
 _SWITCH = Variable(
     "switch", ("switch",), "", "name, in the order of adding", "switches.name", "text"
 )
@@ -36,7 +35,7 @@ VARIANTS = Group(
         REDSHIFT,
         OBSERVABLE,
         OBSERVABLE_UNIT,
-        _CHANNEL,
+        layout.CHANNEL,
         Variable("variant", ("variant",), "", "name of the variant", "variants.name", "text"),
         _by_variant("lines", "", "table [lines] of its setup, as TOML", kind="text"),
         _by_variant("outcome", "", "how it ended: name of an Outcome", kind="text"),
@@ -107,7 +106,7 @@ REFERENCE = Group(
             f"{_BAR}observable",
             "reference_error.observable",
         ),
-        *layout.CHANNELS.variables[1:],
+        *(one for one in layout.CHANNELS.variables if one is not layout.REDSHIFT),
     ),
 )
 

@@ -102,19 +102,20 @@ LINES = Group(
     ),
 )
 
+CHANNEL = Variable(
+    "channel",
+    ("channel",),
+    "",
+    "transition to the ground state; 2s-1s: two photons",
+    "channels.names",
+    "text",
+)
 CHANNELS = Group(
     "channels",
     "how recombined atoms reached the ground state",
     (
         REDSHIFT,
-        Variable(
-            "channel",
-            ("channel",),
-            "",
-            "transition to the ground state; 2s-1s: two photons",
-            "channels.names",
-            "text",
-        ),
+        CHANNEL,
         _by_channel("net_rate_per_s", "s-1", "net transitions per hydrogen nucleus"),
         _by_channel("share", "1", "part of the net rate at this redshift"),
         _by_channel("cumulative_share", "1", "part of all net recombinations so far"),

@@ -193,7 +193,7 @@ DISTILLED_LAYOUT = Layout(
     1,
     "a distilled history",
     layout.ROOT_ATTRIBUTES,
-    (DISTILLED, RUN),
+    (DISTILLED, RUN, layout.NOTES),
     (OBSERVABLES, layout.FIELD),
 )
 

@@ -109,7 +109,8 @@ def escape_notes(study: EscapeStudy) -> tuple[str, ...]:
         *_outcome_notes(study),
         f"errors are differences from the reference, {study.variants.name[study.reference]}, whose "
         f"own numerical error of x_e is at most {percent(own)} there; what its physics leaves out "
-        "(collisions, helium, lines above lyman_lines) is in none of them",
+        "(collisions, helium, lines above lyman_lines, two-photon decay above "
+        "highest_two_photon_n) is in none of them",
         *_check_notes(study, low, high),
         *_line_notes(study),
         "effects of single switches depend on which others are on: first, last and in order are "

@@ -139,17 +139,19 @@ def check_ladder(setup: Setup, rungs: Sequence[int], resolve: Sequence[int] = ()
             f'lines.lyman_lines = "{lines}": every rung would open further lines, and isolated '
             "high lines add escape without end; give the number of lines that escape, such as 1"
         )
-    needed = max((n for n, _ in setup.lines.field_levels), default=2)
-    lowest = max(LOW_N, lines + 1, needed)
+    if setup.lines.transfer is not None:
+        raise InputError(
+            'lines.hydrogen = "transfer": the study holds errors to 1e-8, which a frequency grid '
+            'does not reach; take "sobolev", with which truncation is nearly the same'
+        )
+    lowest = max(LOW_N, lines + 1)
     for name, values in (("rungs", rungs), ("resolve", resolve)):
         text = ", ".join(str(value) for value in values)
         if any(a >= b for a, b in itertools.pairwise(values)):
             raise InputError(f"{name} = {text}: each must be larger than the one before")
         if values and values[0] < lowest:
             reason = f"populations of every (n, l) to n = {LOW_N} are recorded"
-            if needed > LOW_N:
-                reason = f"the field needs levels up to n = {needed}"
-            if lines + 1 > max(LOW_N, needed):
+            if lowest > LOW_N:
                 reason = f"{lines} Lyman lines are open"
             raise InputError(f"{name} = {text}: the lowest allowed is {lowest} ({reason})")
         if values and values[-1] > HIGHEST_N:

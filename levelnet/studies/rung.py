@@ -95,17 +95,9 @@ def study_setup(setup: Setup, also: Iterable[float] = ()) -> Setup:
 
 
 def rung_setup(setup: Setup, n_max: int, resolve_l_to: int | None, relative: float) -> Setup:
-    """The setup of one rung; where `resolve_l_to` is None every level is resolved in l.
-
-    All rungs resolve a field on the grid of the setup: its error is common to them.
-    """
-    lines = setup.lines
-    if lines.transfer is not None:
-        field = dataclasses.replace(lines.transfer, frequency_step=setup.frequency_step)
-        lines = dataclasses.replace(lines, transfer=field)
+    """The setup of one rung; where `resolve_l_to` is None every level is resolved in l."""
     return dataclasses.replace(
         setup,
-        lines=lines,
         hydrogen=dataclasses.replace(setup.hydrogen, n_max=n_max, resolve_l_to=resolve_l_to),
         accuracy=dataclasses.replace(setup.accuracy, relative=relative),
     )

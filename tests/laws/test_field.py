@@ -149,7 +149,7 @@ def test_atom_number(which: str) -> None:
     step = Step(one, now, at_line * rng.uniform(0.0, 3.0, len(one.cells.offset)))
     balance = kernel.Balance(stored, square[0], square[1], line[0], line[1])
     flow = kernel._flow(one.cells, path, slow, step.room, balance)
-    shift = slow.lag - stored[-2]
+    shift = slow.lag - stored[kernel.LOG_LAG]
     capture = np.exp(stored[:n] + stored[n : 2 * n] * shift)
     capture *= around.hydrogen_density_cm3 * around.electron_fraction**2
     boltzmann = boltzmann_populations(one, now)

@@ -190,11 +190,11 @@ def test_march_ends_well() -> None:
     one = atom("all", COARSE_STEP)
     status, track = march(one.cells, path_of(one))
     assert status == kernel.DONE
-    assert track.report[0] == 3.0
-    assert 3.0 <= track.report[1] <= 30.0
+    assert track.report[kernel.STEPS] == 3.0
+    assert 3.0 <= track.report[kernel.ELIMINATIONS] <= 30.0
     # Closed form: photons and atoms are conserved in every step.
-    assert track.report[2] < 1e-9
-    assert track.report[3] <= 1e-9
+    assert track.report[kernel.PHOTON_ERROR] < 1e-9
+    assert track.report[kernel.ATOM_ERROR] <= 1e-9
     assert np.all(np.diff(track.state[:, 0]) < 0.0)
     assert np.any(track.spectra[0] != 0.0)
 
@@ -203,7 +203,7 @@ def test_march_says_that_it_did_not_converge() -> None:
     one = atom("all", COARSE_STEP)
     status, track = march(one.cells, path_of(one), most=1)
     assert status == kernel.NOT_CONVERGED
-    assert track.report[0] == 0.0
+    assert track.report[kernel.STEPS] == 0.0
 
 
 def test_march_says_singular() -> None:
@@ -219,7 +219,7 @@ def test_march_says_singular() -> None:
     closed = one.cells._replace(line_depth=np.zeros(1))
     status, track = march(closed, path._replace(series=series))
     assert status == kernel.SINGULAR
-    assert track.report[0] == 0.0
+    assert track.report[kernel.STEPS] == 0.0
 
 
 @pytest.mark.slow

@@ -17,7 +17,7 @@ from levelnet.background.conditions import Conditions
 from levelnet.cli.line_output import line_rows, line_values
 from levelnet.errors import InputError
 from levelnet.escape.blue_side import log_red_side
-from levelnet.escape.treatment import ResonanceLines, Sobolev
+from levelnet.escape.treatment import ResonanceLines, Sobolev, SobolevFeedback
 from levelnet.history.limits import ESCAPE_FACTOR, LARGEST_X_E_ERROR, limit_notes
 from levelnet.history.line_figures import LineFigures
 from levelnet.history.result import History
@@ -382,6 +382,20 @@ def test_a_figure_of_the_wrong_length_is_one_line() -> None:
     said = r'"wrong": validity\["optical_depth"\] has shape \(2,\); allowed is \(1,\)'
     with pytest.raises(InputError, match=said):
         solve(small_setup(3, 1500.0, 4), line_treatment=Wrong())
+
+
+def test_who_sees_the_blue_side_must_give_depths() -> None:
+    class Silent(SobolevFeedback):
+        """Keeps its depths to itself."""
+
+        name = "silent"
+
+        def couple(self, *given: Any, **named: Any) -> Any:
+            made = SobolevFeedback.couple(self, *given, **named)
+            return dataclasses.replace(made, validity={})
+
+    with pytest.raises(InputError, match='"silent": it sees_blue_side, so validity must hold'):
+        solve(small_setup(4, 1500.0, 4, lines={"lyman_lines": 2}), line_treatment=Silent())
 
 
 def test_summary_shows_the_line_that_carries_most() -> None:

@@ -88,6 +88,13 @@ def test_study_from_setup_to_verdict(folder: Path, capsys: pytest.CaptureFixture
     assert "not for a study of the escape" in capsys.readouterr().err
 
 
+def test_help_names_the_order_that_is_used(capsys: pytest.CaptureFixture[str]) -> None:
+    with pytest.raises(SystemExit):
+        main(["escape", "--help"])
+    said = "".join(capsys.readouterr().out.split())
+    assert f"(default:{','.join(SWITCHES)})" in said
+
+
 @pytest.mark.parametrize(
     ("changed", "words", "message"),
     [
@@ -133,7 +140,7 @@ PLAIN = GOOD.replace("n_max = 4", "n_max = 8")
         (("n_max = 8", "n_max = 3"), "lines.transfer: needs levels up to n = 4"),
         (("end = 200.0", "end = 10.0"), "grid.redshift_end = 10: the field is resolved down to"),
         (
-            ("[grid]", "[accuracy]\nrelative = 1e-9\n" + FIELD.format(1.5e-4) + "[grid]"),
+            ("[grid]", "[accuracy]\nrelative = 2e-8\n" + FIELD.format(1.5e-4) + "[grid]"),
             "cells twice as wide: lines.transfer.frequency_step = 0.0003: too coarse",
         ),
     ],

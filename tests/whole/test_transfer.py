@@ -257,7 +257,7 @@ def test_a_march_that_fails_at_once_says_so(monkeypatch: pytest.MonkeyPatch) -> 
     monkeypatch.setattr(field_module, "_MOST_ITERATIONS", 1)
     with pytest.raises(SolveError) as caught:
         changed()
-    assert caught.value.outcome is Outcome.STEP_TOO_SMALL
+    assert caught.value.outcome is Outcome.FIELD_NOT_SETTLED
 
 
 def test_step_limit_holds_for_the_history_that_tells_the_matter_temperature() -> None:

@@ -381,7 +381,8 @@ def test_notes_are_those_of_the_history_and_of_the_budget(
     assert any("INVENTED laboratory" in note for note in history)
     words = ["weigh", "good.toml", "--of", "x_e(1000)", "--json", "--band", "0"]
     assert main([*words, "--uncertainties", "own.csv"]) == 0
-    assert numbers(capsys)["notes"] == history
+    # But for the warnings, which a history reads off its own line figures.
+    assert numbers(capsys)["notes"] == [one for one in history if not one.startswith("warning")]
     # The default table: what it holds, and what it does not.
     setup = levelnet.load_setup("good.toml")
     table = [one for one in load_uncertainties() if one.selector.process != "escape"]
