@@ -22,8 +22,9 @@ from ..kernels.continuum_escape import escape_with_continuum
 # y = SCALE sinh(u) on cells uniform in u and on cells twice as wide, the two extrapolated (order 2
 # to order 4); up to this many Doppler widths.
 _SCALE, _STEP, _FARTHEST = 2.0, 0.03, 1e12
-# The grid ends where the wing beyond has this depth, and not before so many widths.
-_TAIL_DEPTH, _NEAREST = 1e-5, 30.0
+# The grid ends where the wing beyond has this depth, and not before so many widths; with a
+# continuum, this factor beyond where it takes over.
+_TAIL_DEPTH, _NEAREST, _FAR = 1e-5, 30.0, 100.0
 _ASYMPTOTIC = 12.0
 LARGEST_DAMPING = 0.03
 """Series of the profile to the third power of the damping: within 1e-6 up to here."""
@@ -88,12 +89,24 @@ def continuum_escape(depth: float, continuum: float, damping: float) -> Chance:
         )
     if not 0.0 <= damping <= LARGEST_DAMPING:
         raise InputError(f"damping = {damping:g}: allowed are 0 to {LARGEST_DAMPING:g}")
-    reach = min(max(damping * depth / (math.pi * _TAIL_DEPTH), _NEAREST), _FARTHEST)
-    half = math.ceil(math.asinh(reach / _SCALE) / (2.0 * _STEP))
+    half = math.ceil(math.asinh(_reach(depth, continuum, damping) / _SCALE) / (2.0 * _STEP))
     coarse, fine = np.empty((2, 4))
     escape_with_continuum(depth, continuum, damping, half, _cells(2.0 * _STEP), coarse)
     escape_with_continuum(depth, continuum, damping, 2 * half, _cells(_STEP), fine)
     return Chance(*((4.0 * fine - coarse) / 3.0).tolist())
+
+
+def _reach(depth: float, continuum: float, damping: float) -> float:
+    """Doppler widths to where nothing changes any more.
+
+    There the wing beyond is thin; or the continuum, which has long forgotten the blue side, is so
+    much thicker than the line that h = 1.
+    """
+    wing = damping * depth / math.pi  # tau phi y^2
+    reach = wing / _TAIL_DEPTH
+    if continuum > 0.0:
+        reach = min(reach, _FAR * max(math.sqrt(wing / continuum), 1.0 / continuum))
+    return min(max(reach, _NEAREST), _FARTHEST)
 
 
 @functools.cache
