@@ -192,9 +192,14 @@ class SlowEquations:
 
     def remember(self, log_scale: float, state: FloatArray) -> None:
         """Keep what an accepted step sends to the lines below, if the treatment asks for it."""
-        if self.past is None:
+        remembers = self.helium is not None and self.helium.past is not None
+        if self.past is None and not remembers:
             return
         here = self.local(log_scale, state)
+        if self.helium is not None:
+            self.helium.remember(self._around_helium(log_scale, here.conditions), state[2:])
+        if self.past is None:
+            return
         blue = self.past.blue_side(log_scale, 0.0).log_distortion
         red = log_red_side(*self.line_state(here), here.coupling.validity["optical_depth"], blue)
         self.past.remember(log_scale, red)
@@ -237,16 +242,20 @@ class SlowEquations:
 
     def _helium_rates(self, log_scale: float, here: Local, state: FloatArray) -> HeliumRates:
         assert self.helium is not None
-        c, ratio = here.conditions, self.cosmology.helium_ratio()
-        around = Around(
+        return self.helium.rates(self._around_helium(log_scale, here.conditions), state[2:])
+
+    def _around_helium(self, log_scale: float, c: Conditions) -> Around:
+        ratio = self.cosmology.helium_ratio()
+        return Around(
             c.radiation_temperature_k,
             c.matter_temperature_k,
             ratio * c.hydrogen_density_cm3,
             c.hubble_rate_per_s,
             c.electron_fraction / ratio,
             self.background(log_scale).hubble_slope,
+            c.hydrogen_density_cm3 * c.ground_fraction,
+            log_scale,
         )
-        return self.helium.rates(around, state[2:])
 
     def jacobian(self, log_scale: float, state: FloatArray) -> tuple[FloatArray, FloatArray]:
         """Derivatives of the rates by the state, shape (n, n), and by s, shape (n,)."""
@@ -288,6 +297,8 @@ class SlowEquations:
         matrix = np.zeros((4, 4))
         matrix[:2, :2], matrix[2:, 2:] = own, found.by_own
         matrix[2:, 1] = found.by_matter
+        # ln x_HI falls by x_HII per unit of u.
+        matrix[2:, 0] = -c.ionized_fraction * found.by_neutral_hydrogen
         matrix += np.outer(np.append(by_electrons, found.by_electrons), electrons)
         return Linearized(
             here,
