@@ -47,6 +47,10 @@ class Seen(NamedTuple):
     blue: HeliumBlueSide | None = None
 
 
+NOTHING_SEEN = Seen()
+"""No neutral hydrogen, and the blackbody on the blue sides."""
+
+
 class Chances(NamedTuple):
     """Escape probability of every line and its derivatives; arrays of shape (n_lines,).
 
@@ -77,7 +81,7 @@ class HeliumTreatment:
         lines: HeliumGroundLines,
         kept: KeptLevels,
         conditions: Conditions,
-        seen: Seen = Seen(),
+        seen: Seen = NOTHING_SEEN,
     ) -> GroundCoupling:
         """Give K and s of the net flow to the ground state, and their exact slopes.
 
@@ -165,7 +169,9 @@ def _lit(
     np.add.at(heat, upper, rate * more * exponent * inverse)
     np.add.at(source, upper, lift)
     np.add.at(ground, upper, lift * (1.0 + slope))
-    by_time = lift * (slope * (-3.0 - blue.hubble_slope) - exponent) + lit * blue.slope
+    # The Boltzmann population goes by the energy of the term, the field by that of the photon.
+    excited = kept.energy_ev[upper] / (const.BOLTZMANN_EV_K * radiation_k)
+    by_time = lift * (slope * (-3.0 - blue.hubble_slope) - excited) + lit * blue.slope
     np.add.at(time, upper, by_time)
     np.add.at(continuum, upper, lit * blue.by_continuum)
     return replace(

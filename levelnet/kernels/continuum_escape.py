@@ -21,7 +21,7 @@ FloatArray = NDArray[np.float64]
 
 @kernel
 def _mean_decay(depth: float) -> tuple[float, float]:
-    """q = (1 - e^-D)/D and dq/dD."""
+    """Give q = (1 - e^-D)/D and dq/dD."""
     if depth < 1e-3:
         q = 1.0 - depth * (0.5 - depth * (1.0 / 6.0 - depth / 24.0))
         return q, -0.5 + depth * (1.0 / 3.0 - depth * (0.125 - depth / 30.0))
