@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import Literal
+from typing import Literal, get_args
 
 import numpy as np
 
@@ -14,6 +14,7 @@ from ..atomic.helium_ground import INTERCOMBINATION_PER_S, GroundLines, ground_l
 from ..atomic.helium_levels import HeliumLevels
 from ..atomic.helium_widths import OtherDecays, other_decays
 from ..atomic.levels import reduced_mass_ratio
+from ..errors import InputError
 from ..network.helium import HeliumLadders, KeptTerms
 from .treatment import ResonanceLines
 
@@ -40,6 +41,8 @@ def kept_terms(n_max: int, higher: HigherLines) -> KeptTerms:
     higher : "free", "closed" or "feedback"
         What becomes of n 1P -> 1 1S from n = 3.
     """
+    if higher not in get_args(HigherLines):
+        raise InputError(f'higher lines = "{higher}": known are {get_args(HigherLines)}')
     highest = {"free": n_max, "closed": 2, "feedback": min(n_max, HIGHEST_FED)}[higher]
     resonance = tuple((n, 1, 0) for n in range(3, highest + 1))
     return ((2, 0, 0), (2, 1, 0), (2, 0, 1), (2, 1, 1), *resonance)

@@ -14,7 +14,7 @@ across the core is thin. It is therefore absorbed with S.
 from __future__ import annotations
 
 from dataclasses import dataclass, replace
-from typing import ClassVar, Literal, NamedTuple
+from typing import ClassVar, NamedTuple
 
 import numpy as np
 
@@ -26,10 +26,7 @@ from ..network.reduced import KeptLevels
 from ..network.solve import log_boltzmann_populations
 from .helium_lines import HeliumGroundLines
 from .helium_past import HeliumBlueSide
-from .helium_profile import LARGEST_DAMPING, continuum_escape
 from .sobolev import escape_probability, escape_slope, sobolev_optical_depth
-
-Redistribution = Literal["doppler", "complete", "partial"]
 
 
 class Seen(NamedTuple):
@@ -71,10 +68,22 @@ class Chances(NamedTuple):
 
 @dataclass(frozen=True, slots=True)
 class HeliumTreatment:
-    """What all treatments share; a line is lit by another where its record says so (`lit_by`)."""
+    """What all treatments share; a line is lit by another where its record says so (`lit_by`).
 
-    keeps: ClassVar[tuple[tuple[int, int], ...]] = ()
+    Attributes
+    ----------
+    name : str
+        As in a setup file.
+    absorbs : bool
+        Whether neutral hydrogen absorbs, inside lines and between them.
+    assumes, holds_for : tuple of str
+        Short sentences; validity figures and their limits.
+    """
+
+    name: ClassVar[str]
     absorbs: ClassVar[bool] = False
+    assumes: ClassVar[tuple[str, ...]]
+    holds_for: ClassVar[tuple[str, ...]]
 
     def couple(
         self,
@@ -156,7 +165,8 @@ def _lit(
     rate, slope = lines.einstein_a_per_s * escape_probability(depth), escape_slope(depth)
     # f (u - 1): each factor alone leaves the doubles in a cold field.
     more = (np.exp(blue.log_distortion - exponent) - np.exp(-exponent)) * inverse
-    log_boltzmann = log_boltzmann_populations(kept, radiation_k, conditions.ground_fraction)[upper]
+    log_all = log_boltzmann_populations(kept, radiation_k, conditions.ground_fraction)
+    log_boltzmann = log_all[upper]
     lit = rate * np.exp(log_boltzmann + blue.log_distortion)
     lift = np.where(
         blue.log_distortion < 1.0,
@@ -177,7 +187,7 @@ def _lit(
     return replace(
         plain,
         loss=plain.loss + np.diag(loss),
-        source=plain.source + loss * np.exp(_boltzmann(kept, conditions)) + source,
+        source=plain.source + loss * np.exp(log_all) + source,
         slope_column=plain.slope_column + np.diag(column),
         slope_temperature=plain.slope_temperature + np.diag(heat),
         excess_source=source,
@@ -188,18 +198,11 @@ def _lit(
     )
 
 
-def _boltzmann(kept: KeptLevels, conditions: Conditions) -> FloatArray:
-    return log_boltzmann_populations(
-        kept, conditions.radiation_temperature_k, conditions.ground_fraction
-    )
-
-
 @dataclass(frozen=True, slots=True)
 class HeliumSobolev(HeliumTreatment):
     """Each line alone, photons redshifting out of it: P = (1 - e^-tau)/tau."""
 
     name: ClassVar[str] = "sobolev"
-    resolves: ClassVar[tuple[str, ...]] = ()
     assumes: ClassVar[tuple[str, ...]] = (
         "Complete redistribution over the line profile.",
         "Lines do not overlap; the field on the blue side is the blackbody.",
@@ -217,117 +220,9 @@ class HeliumSobolevFeedback(HeliumTreatment):
     """Sobolev, each line lit from its blue side by what the line above has let through."""
 
     name: ClassVar[str] = "sobolev_feedback"
-    resolves: ClassVar[tuple[str, ...]] = ("feedback",)
     assumes: ClassVar[tuple[str, ...]] = (
         "Complete redistribution over the line profile.",
         "Photons that leave a line redshift unchanged to the next one below.",
         "Neutral hydrogen absorbs neither inside a line nor between lines.",
     )
     holds_for: ClassVar[tuple[str, ...]] = HeliumSobolev.holds_for
-
-
-@dataclass(frozen=True, slots=True)
-class HeliumContinuum(HeliumTreatment):
-    """Photoionization of hydrogen inside the lines and, with feedback, between them.
-
-    Parameters
-    ----------
-    redistribution : "doppler", "complete" or "partial"
-        Over which profile a line makes and destroys photons: its Doppler core alone (coherent
-        wings); the Voigt profile of the whole natural width; or that with the damping scaled by
-        the incoherent fraction, the chance that the upper level leaves to another level than the
-        ground state.
-    feedback : bool
-        For the record; `lit_by` of the lines says which line lights which.
-    """
-
-    redistribution: Redistribution = "partial"
-    feedback: bool = True
-    name: ClassVar[str] = "continuum"
-    absorbs: ClassVar[bool] = True
-    assumes: ClassVar[tuple[str, ...]] = (
-        "Coherent scattering in the wings neither makes nor destroys photons, nor moves them.",
-        "Continuum, source function and Doppler width constant across a line, and the continuum a "
-        "blackbody at T_r; the Doppler width is that of T_r.",
-        "Photons from a line above are absorbed as in Sobolev's line.",
-    )
-    holds_for: ClassVar[tuple[str, ...]] = (
-        "Continuum thin across the Doppler core (continuum_depth << 1). Doppler-only and complete "
-        "redistribution bracket the truth: they change x_e by 1 to 1.3 and 1 to 3.8 per cent "
-        "against partial redistribution (Kholupenko, Ivanchik & Varshalovich 2008, Astron. Lett. "
-        "34, 725; volume and page from memory).",
-    )
-
-    @property
-    def resolves(self) -> tuple[str, ...]:
-        """Limits it has no need of."""
-        return ("feedback",) if self.feedback else ()
-
-    def escape(
-        self,
-        lines: HeliumGroundLines,
-        conditions: Conditions,
-        optical_depth: FloatArray,
-        neutral_hydrogen_cm3: float,
-    ) -> Chances:
-        """P of every line, with the continuum inside it."""
-        width = doppler_width(conditions.radiation_temperature_k)
-        per_log = continuum_depth(lines, neutral_hydrogen_cm3, conditions.hubble_rate_per_s)
-        incoherent, damping, damping_slope = self._damping(lines, conditions)
-        found = [
-            continuum_escape(*one)
-            for one in zip(
-                optical_depth.tolist(), (per_log * width).tolist(), damping.tolist(), strict=True
-            )
-        ]
-        value, by_depth, by_continuum, by_damping = np.array(found).reshape(-1, 4).T
-        validity = {
-            "continuum_depth": per_log * width,
-            "damping": damping,
-            "incoherent_fraction": incoherent,
-        }
-        # The Doppler width goes as the square root of T.
-        by_temperature = 0.5 * by_continuum + by_damping * damping_slope
-        return Chances(value, by_depth, by_continuum, by_temperature, validity)
-
-    def _damping(
-        self, lines: HeliumGroundLines, conditions: Conditions
-    ) -> tuple[FloatArray, FloatArray, FloatArray]:
-        """Incoherent fraction, Voigt parameter and its derivative by ln T_r."""
-        radiation_k = conditions.radiation_temperature_k
-        other, slope = lines.others.total(radiation_k)
-        total = lines.ground_rate_per_s + other
-        frequency = lines.energy_ev / const.PLANCK_EV_S
-        scale = 1.0 / (4.0 * np.pi * frequency * doppler_width(radiation_k))
-        if self.redistribution == "doppler":
-            return other / total, np.zeros_like(total), np.zeros_like(total)
-        rate = total if self.redistribution == "complete" else other
-        damping, by = rate * scale, (slope - 0.5 * rate) * scale
-        # Reached below 30 K alone, where no helium is left to recombine.
-        within = damping < LARGEST_DAMPING
-        return other / total, np.where(within, damping, LARGEST_DAMPING), np.where(within, by, 0.0)
-
-
-def doppler_width(temperature_k: float) -> float:
-    """Doppler width of helium in ln nu, sqrt(2 k T/M)/c (dimensionless)."""
-    mass_g = const.HELIUM_MASS_U * const.ELECTRON_MASS_G / const.ELECTRON_MASS_U
-    speed = np.sqrt(2.0 * const.BOLTZMANN_ERG_K * temperature_k / mass_g)
-    return float(speed / const.SPEED_OF_LIGHT_CM_S)
-
-
-def continuum_depth(
-    lines: HeliumGroundLines, neutral_hydrogen_cm3: float, hubble_rate_per_s: float
-) -> FloatArray:
-    """Depth n_HI sigma c/H of the H I continuum per ln nu at each line (dimensionless)."""
-    column = neutral_hydrogen_cm3 * const.SPEED_OF_LIGHT_CM_S / hubble_rate_per_s
-    depth: FloatArray = lines.hydrogen_cross_section_cm2 * column
-    return depth
-
-
-HELIUM_TREATMENTS: tuple[HeliumTreatment, ...] = (
-    HeliumSobolev(),
-    HeliumSobolevFeedback(),
-    HeliumContinuum("doppler"),
-    HeliumContinuum("complete"),
-    HeliumContinuum("partial"),
-)

@@ -24,8 +24,9 @@ from ..arrays import FloatArray
 from ..atomic.detailed_balance import log_saha_factor
 from ..background.conditions import Conditions
 from ..escape.blue_side import log_red_side
+from ..escape.helium_continuum import continuum_depth
 from ..escape.helium_past import HeliumPast
-from ..escape.helium_treatment import HeliumTreatment, Seen, continuum_depth
+from ..escape.helium_treatment import HeliumTreatment, Seen
 from ..escape.treatment import LineTreatment, ResonanceLines
 from ..network.coupling import GroundCoupling, with_decay
 from ..network.gradient import FlowGradient, flow_slopes, net_flow_gradient
@@ -297,28 +298,37 @@ class HeliumEquations:
         if self.past is None:
             return Seen(hydrogen_cm3)
         depth = None
-        if getattr(self.first.treatment, "absorbs", False):
+        if isinstance(self.first.treatment, HeliumTreatment) and self.first.treatment.absorbs:
             depth = continuum_depth(self.past.lines, hydrogen_cm3, around.hubble_rate_per_s)
         return Seen(hydrogen_cm3, self.past.blue_side(around.log_scale, around.hubble_slope, depth))
+
+    def line_figures(self, around: Around, state: FloatArray) -> dict[str, FloatArray]:
+        """Validity figures of the lines of He I at (a, b), shape (n_lines,) each.
+
+        Those of the treatment, with the ln of the distortion of the field on both sides,
+        "log_blue_side" and "log_red_side".
+        """
+        x, lines = self.fractions(state), self.first.lines
+        here = self.first.solve(_conditions(around, x.single, x.neutral), self._seen(around))
+        departure = here.solution.log_population - here.solution.log_boltzmann
+        kt = const.BOLTZMANN_EV_K * around.radiation_temperature_k
+        figures = here.coupling.validity
+        blue = figures.get("log_blue_side", np.zeros(len(lines.names)))
+        red = log_red_side(
+            departure[lines.upper], lines.energy_ev / kt, figures["optical_depth"], blue
+        )
+        return {**figures, "log_blue_side": blue, "log_red_side": red}
 
     def remember(self, around: Around, state: FloatArray) -> None:
         """Keep what an accepted step sends to lines below."""
         if self.past is None:
             return
-        x, seen = self.fractions(state), self._seen(around)
-        here = self.first.solve(_conditions(around, x.single, x.neutral), seen)
-        lines = self.past.lines
-        departure = here.solution.log_population - here.solution.log_boltzmann
-        kt = const.BOLTZMANN_EV_K * around.radiation_temperature_k
-        assert seen.blue is not None
-        red = log_red_side(
-            departure[lines.upper],
-            lines.energy_ev / kt,
-            here.coupling.validity["optical_depth"],
-            seen.blue.log_distortion,
+        depth = continuum_depth(
+            self.past.lines, around.neutral_hydrogen_cm3, around.hubble_rate_per_s
         )
-        hydrogen_cm3, hubble = around.neutral_hydrogen_cm3, around.hubble_rate_per_s
-        self.past.remember(around.log_scale, red, continuum_depth(lines, hydrogen_cm3, hubble))
+        self.past.remember(
+            around.log_scale, self.line_figures(around, state)["log_red_side"], depth
+        )
 
     @staticmethod
     def _first_rates(around: Around, x: HeliumFractions, flow: Flow) -> list[float]:
