@@ -40,12 +40,8 @@ class Seen(NamedTuple):
         The field on the blue sides; None: the blackbody.
     """
 
-    neutral_hydrogen_cm3: float = 0.0
+    neutral_hydrogen_cm3: float
     blue: HeliumBlueSide | None = None
-
-
-NOTHING_SEEN = Seen()
-"""No neutral hydrogen, and the blackbody on the blue sides."""
 
 
 class Chances(NamedTuple):
@@ -90,7 +86,7 @@ class HeliumTreatment:
         lines: HeliumGroundLines,
         kept: KeptLevels,
         conditions: Conditions,
-        seen: Seen = NOTHING_SEEN,
+        seen: Seen,
     ) -> GroundCoupling:
         """Give K and s of the net flow to the ground state, and their exact slopes.
 
@@ -102,7 +98,7 @@ class HeliumTreatment:
             The kept levels of He I.
         conditions : Conditions
             Densities and fractions of helium.
-        seen : Seen, optional
+        seen : Seen
             Neutral hydrogen, and the fields that lines above have sent.
         """
         radiation_k = conditions.radiation_temperature_k

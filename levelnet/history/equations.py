@@ -192,14 +192,11 @@ class SlowEquations:
 
     def remember(self, log_scale: float, state: FloatArray) -> None:
         """Keep what an accepted step sends to the lines below, if the treatment asks for it."""
-        remembers = self.helium is not None and self.helium.past is not None
-        if self.past is None and not remembers:
-            return
-        here = self.local(log_scale, state)
         if self.helium is not None:
-            self.helium.remember(self._around_helium(log_scale, here.conditions), state[2:])
+            self.helium.remember(self.helium_around(log_scale, state), state[2:])
         if self.past is None:
             return
+        here = self.local(log_scale, state)
         blue = self.past.blue_side(log_scale, 0.0).log_distortion
         red = log_red_side(*self.line_state(here), here.coupling.validity["optical_depth"], blue)
         self.past.remember(log_scale, red)
@@ -228,7 +225,7 @@ class SlowEquations:
         rate = self._rate_of(here, state)
         if self.helium is None:
             return rate
-        return np.append(rate, self._helium_rates(log_scale, here, state).rate)
+        return np.append(rate, self._helium_rates(log_scale, state).rate)
 
     def _rate_of(self, here: Local, state: FloatArray) -> FloatArray:
         c = here.conditions
@@ -240,22 +237,23 @@ class SlowEquations:
             ]
         )
 
-    def _helium_rates(self, log_scale: float, here: Local, state: FloatArray) -> HeliumRates:
-        assert self.helium is not None
-        return self.helium.rates(self._around_helium(log_scale, here.conditions), state[2:])
-
-    def _around_helium(self, log_scale: float, c: Conditions) -> Around:
-        ratio = self.cosmology.helium_ratio()
+    def helium_around(self, log_scale: float, state: FloatArray) -> Around:
+        """What helium sees at one time and state."""
+        around, ratio = self.background(log_scale), self.cosmology.helium_ratio()
         return Around(
-            c.radiation_temperature_k,
-            c.matter_temperature_k,
-            ratio * c.hydrogen_density_cm3,
-            c.hubble_rate_per_s,
-            c.electron_fraction / ratio,
-            self.background(log_scale).hubble_slope,
-            c.hydrogen_density_cm3 * c.ground_fraction,
+            around.radiation_temperature_k,
+            around.radiation_temperature_k * math.exp(state[1]),
+            ratio * around.hydrogen_density_cm3,
+            around.hubble_rate_per_s,
+            self.electron_fraction(state) / ratio,
+            around.hubble_slope,
+            around.hydrogen_density_cm3 * ionized_and_neutral(float(state[0]))[1],
             log_scale,
         )
+
+    def _helium_rates(self, log_scale: float, state: FloatArray) -> HeliumRates:
+        assert self.helium is not None
+        return self.helium.rates(self.helium_around(log_scale, state), state[2:])
 
     def jacobian(self, log_scale: float, state: FloatArray) -> tuple[FloatArray, FloatArray]:
         """Derivatives of the rates by the state, shape (n, n), and by s, shape (n,)."""
@@ -293,7 +291,7 @@ class SlowEquations:
         if self.helium is None:
             matrix = own + np.outer(by_electrons, electrons)
             return Linearized(here, rate, matrix, drift, gradient, slopes)
-        found = self._helium_rates(log_scale, here, state)
+        found = self._helium_rates(log_scale, state)
         matrix = np.zeros((4, 4))
         matrix[:2, :2], matrix[2:, 2:] = own, found.by_own
         matrix[2:, 1] = found.by_matter

@@ -194,9 +194,22 @@ class IonNetwork:
         here = math.exp(float(log_boltzmann[self.decay]))
         return with_decay(lines, self.decay, self.decay_rate_per_s, 0.0, here)
 
+    @staticmethod
+    def conditions(around: Around, ion: float, ground: float) -> Conditions:
+        """Give conditions of a stage with these fractions of ions and of ground states."""
+        return Conditions(
+            around.radiation_temperature_k,
+            around.matter_temperature_k,
+            around.helium_density_cm3,
+            around.hubble_rate_per_s,
+            around.electrons_per_helium,
+            ion,
+            ground,
+        )
+
     def flow(self, around: Around, ion: float, ground: float, seen: Seen | None = None) -> Flow:
         """Net recombinations and their derivatives."""
-        conditions = _conditions(around, ion, ground)
+        conditions = self.conditions(around, ion, ground)
         here = self.solve(conditions, seen)
         gradient = net_flow_gradient(here.rates, here.coupling, here.solution)
         slopes = flow_slopes(self.reduced.kept, here.rates, here.coupling, conditions, gradient)
@@ -218,18 +231,6 @@ class IonNetwork:
             by_time,
             by_continuum + by_excess,
         )
-
-
-def _conditions(around: Around, ion: float, ground: float) -> Conditions:
-    return Conditions(
-        around.radiation_temperature_k,
-        around.matter_temperature_k,
-        around.helium_density_cm3,
-        around.hubble_rate_per_s,
-        around.electrons_per_helium,
-        ion,
-        ground,
-    )
 
 
 def _surroundings(coupling: GroundCoupling, gradient: FlowGradient) -> tuple[float, float, float]:
@@ -302,14 +303,19 @@ class HeliumEquations:
             depth = continuum_depth(self.past.lines, hydrogen_cm3, around.hubble_rate_per_s)
         return Seen(hydrogen_cm3, self.past.blue_side(around.log_scale, around.hubble_slope, depth))
 
+    def first_local(self, around: Around, state: FloatArray) -> Local:
+        """Kept levels of He I at (a, b)."""
+        x = self.fractions(state)
+        conditions = self.first.conditions(around, x.single, x.neutral)
+        return self.first.solve(conditions, self._seen(around))
+
     def line_figures(self, around: Around, state: FloatArray) -> dict[str, FloatArray]:
         """Validity figures of the lines of He I at (a, b), shape (n_lines,) each.
 
         Those of the treatment, with the ln of the distortion of the field on both sides,
         "log_blue_side" and "log_red_side".
         """
-        x, lines = self.fractions(state), self.first.lines
-        here = self.first.solve(_conditions(around, x.single, x.neutral), self._seen(around))
+        here, lines = self.first_local(around, state), self.first.lines
         departure = here.solution.log_population - here.solution.log_boltzmann
         kt = const.BOLTZMANN_EV_K * around.radiation_temperature_k
         figures = here.coupling.validity
