@@ -141,5 +141,6 @@ def _lit_by(log_energy: FloatArray, n: IntArray, low: bool, high: bool) -> IntAr
     for line, own in enumerate(log_energy):
         above = np.flatnonzero(log_energy > own + _SAME_LINE)
         if len(above) and (high if n[above[0]] > 2 else low):
-            lit[line] = above[0]
+            # Of lines that are one, the highest: 2 3P1 lets the least through.
+            lit[line] = np.flatnonzero(log_energy < log_energy[above[0]] + _SAME_LINE)[-1]
     return lit
