@@ -18,6 +18,7 @@ from scipy.special import dawsn
 from ..arrays import FloatArray
 from ..errors import InputError
 from ..kernels.continuum_escape import escape_with_continuum
+from ..kernels.diffusive_escape import escape_with_diffusion
 
 # y = SCALE sinh(u) on cells uniform in u and on cells twice as wide, the two extrapolated (order 2
 # to order 4); up to this many Doppler widths.
@@ -26,6 +27,8 @@ _SCALE, _STEP, _FARTHEST = 2.0, 0.03, 1e12
 # continuum, this factor beyond where it takes over.
 _TAIL_DEPTH, _NEAREST, _FAR = 1e-5, 30.0, 100.0
 _ASYMPTOTIC = 12.0
+# Cells in u with diffusion: of first order where that has ceased.
+_DIFFUSIVE_STEP = 0.0125
 LARGEST_DAMPING = 0.03
 """Series of the profile to the third power of the damping: within 1e-6 up to here."""
 
@@ -94,6 +97,59 @@ def continuum_escape(depth: float, continuum: float, damping: float) -> Chance:
     escape_with_continuum(depth, continuum, damping, half, _cells(2.0 * _STEP), coarse)
     escape_with_continuum(depth, continuum, damping, 2 * half, _cells(_STEP), fine)
     return Chance(*((4.0 * fine - coarse) / 3.0).tolist())
+
+
+def diffusive_escape(
+    depth: float, continuum: float, damping: float, incoherent: float
+) -> tuple[Chance, float]:
+    """Escape probability where coherent scattering shifts photons by Doppler widths.
+
+    Parameters
+    ----------
+    depth, continuum : float, dimensionless
+        As in :func:`continuum_escape`.
+    damping : float, dimensionless
+        Voigt parameter of the whole natural width; 0 to 0.03.
+    incoherent : float, dimensionless
+        Part p of the absorbed photons that is lost to other levels; above 0, below 1.
+
+    Returns
+    -------
+    Chance
+        P, within 2e-3; at c = 0 within 1/(p tau) of 1/tau, for thick lines alone (p tau >> 1).
+    float
+        dP/dp.
+
+    Notes
+    -----
+    Of f_o, the source function of what other levels send back, Q/(p tau) = P_o is the escape
+    probability; the line's own f_L - f_bb is 1 - (1 - p) P_o of f_o - f_bb, so that
+    P = p P_o/(1 - (1 - p) P_o).
+
+    References
+    ----------
+    Hirata & Switzer 2008, Phys. Rev. D 77, 083007 (coherent scattering in He I lines; from memory);
+    Rybicki & dell'Antonio 1994, Astrophys. J. 427, 603 (diffusion; from memory).
+    """
+    reach = _reach(depth, continuum, damping * incoherent)
+    half = math.ceil(math.asinh(reach / _SCALE) / _DIFFUSIVE_STEP)
+    cells, out = _cells(_DIFFUSIVE_STEP), np.empty(5)
+    line = np.array([depth, continuum, damping, incoherent])
+    escape_with_diffusion(line, half, cells, np.empty((8, 2 * half)), out)
+    left = 1.0 - (1.0 - incoherent) * out[0] / (incoherent * depth)
+    value = out[0] / (depth * left)
+    # By Q, and by tau and p at constant Q.
+    by_q = 1.0 / (depth * left**2)
+    by_p = -by_q * out[0] ** 2 / (depth * incoherent**2)
+    return (
+        Chance(
+            value,
+            float(by_q * (out[1] - out[0])),
+            float(by_q * out[2]),
+            float(by_q * out[3]),
+        ),
+        float(by_q * out[4] + by_p),
+    )
 
 
 def _reach(depth: float, continuum: float, damping: float) -> float:

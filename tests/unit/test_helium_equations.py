@@ -32,6 +32,7 @@ def after_some_steps(
         (HeliumSobolev(), False),
         (HeliumSobolevFeedback(), True),
         (HeliumContinuum("partial"), False),
+        (HeliumContinuum("partial", diffusion=True), True),
         (HeliumContinuum("complete"), True),
         (HeliumContinuum("doppler"), True),
     ],

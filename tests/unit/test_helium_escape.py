@@ -40,9 +40,7 @@ ALONE = Seen(NEUTRAL_HYDROGEN_CM3, None)
 BLUE = HeliumBlueSide(
     np.array([0.3, 2.0, 2.0, 0.0]), np.array([1.0, -4.0, -4.0, 0.0]), np.zeros(4), -1.9
 )
-each_treatment = pytest.mark.parametrize(
-    "member", HELIUM_TREATMENTS, ids=lambda t: t.name + getattr(t, "redistribution", "")
-)
+each_treatment = pytest.mark.parametrize("member", HELIUM_TREATMENTS, ids=str)
 each_seen = pytest.mark.parametrize("seen", [ALONE, Seen(NEUTRAL_HYDROGEN_CM3, BLUE)])
 
 
@@ -311,5 +309,7 @@ def test_each_says_what_it_is(member: HeliumTreatment) -> None:
 def test_wrong_choices() -> None:
     with pytest.raises(InputError, match="redistribution"):
         HeliumContinuum("lorentz")  # type: ignore[arg-type]
+    with pytest.raises(InputError, match="diffusion"):
+        HeliumContinuum("complete", diffusion=True)
     with pytest.raises(InputError, match="intercombination"):
         helium_ground_lines(small_ladders(), False, "closed", -1.0)
