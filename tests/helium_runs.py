@@ -25,7 +25,7 @@ from levelnet.network.helium import HeliumReduction, tabulate_helium
 from levelnet.network.ladder import hydrogen_ladder
 from levelnet.network.tabulation import TabulatedReduction, tabulate
 from levelnet.numerics.stepping import Trajectory, integrate
-from tests.small_helium import small_ladders, small_lines
+from tests.small_helium_lines import small_ladders, small_lines
 from tests.small_runs import COSMOLOGY
 
 REDSHIFTS = tuple(range(2900, 1590, -10))

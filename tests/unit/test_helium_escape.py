@@ -24,7 +24,7 @@ from levelnet.escape.helium_treatment import HeliumSobolev, HeliumTreatment, See
 from levelnet.network.coupling import GroundCoupling
 from levelnet.network.solve import log_boltzmann_populations
 from levelnet.tables import read_table
-from tests.small_helium import (
+from tests.small_helium_lines import (
     HALF_WAY,
     NEUTRAL_HYDROGEN_CM3,
     changed,
