@@ -22,13 +22,13 @@ from ..kernels.diffusive_escape import escape_with_diffusion
 
 # y = SCALE sinh(u) on cells uniform in u and on cells twice as wide, the two extrapolated (order 2
 # to order 4); up to this many Doppler widths.
-_SCALE, _STEP, _FARTHEST = 2.0, 0.03, 1e12
+_SCALE, _STEP, _FARTHEST = 2.0, 1.0 / 36.0, 1e12
 # The grid ends where the wing beyond has this depth, and not before so many widths; with a
 # continuum, this factor beyond where it takes over.
-_TAIL_DEPTH, _NEAREST, _FAR = 1e-5, 30.0, 100.0
+_TAIL_DEPTH, _NEAREST, _FAR = 1e-5, 30.0, 300.0
 _ASYMPTOTIC = 12.0
 # Cells in u with diffusion: of first order where that has ceased.
-_DIFFUSIVE_STEP = 0.0125
+_DIFFUSIVE_STEP = 1.0 / 80.0
 LARGEST_DAMPING = 0.03
 """Series of the profile to the third power of the damping: within 1e-6 up to here."""
 
@@ -92,7 +92,7 @@ def continuum_escape(depth: float, continuum: float, damping: float) -> Chance:
         )
     if not 0.0 <= damping <= LARGEST_DAMPING:
         raise InputError(f"damping = {damping:g}: allowed are 0 to {LARGEST_DAMPING:g}")
-    half = math.ceil(math.asinh(_reach(depth, continuum, damping) / _SCALE) / (2.0 * _STEP))
+    half = _half(_reach(depth, continuum, damping), 2.0 * _STEP)
     coarse, fine = np.empty((2, 4))
     escape_with_continuum(depth, continuum, damping, half, _cells(2.0 * _STEP), coarse)
     escape_with_continuum(depth, continuum, damping, 2 * half, _cells(_STEP), fine)
@@ -132,7 +132,7 @@ def diffusive_escape(
     Rybicki & dell'Antonio 1994, Astrophys. J. 427, 603 (diffusion; from memory).
     """
     reach = _reach(depth, continuum, damping * incoherent)
-    half = math.ceil(math.asinh(reach / _SCALE) / _DIFFUSIVE_STEP)
+    half = _half(reach, _DIFFUSIVE_STEP)
     cells, out = _cells(_DIFFUSIVE_STEP), np.empty(5)
     line = np.array([depth, continuum, damping, incoherent])
     escape_with_diffusion(line, half, cells, np.empty((8, 2 * half)), out)
@@ -165,10 +165,15 @@ def _reach(depth: float, continuum: float, damping: float) -> float:
     return min(max(reach, _NEAREST), _FARTHEST)
 
 
+def _half(reach: float, step: float) -> int:
+    """Cells on each side, in whole units of u, so that the end of the grid rarely moves."""
+    return round(math.ceil(math.asinh(reach / _SCALE)) / step)
+
+
 @functools.cache
 def _cells(step: float) -> FloatArray:
     """Widths, and the series of the normalized profile times them; shape (n_cells, 5)."""
-    count = math.ceil(math.asinh(_FARTHEST / _SCALE) / step) + 2
+    count = _half(_FARTHEST, step) + 2
     u = (np.arange(count) + 0.5) * step
     y, width = _SCALE * np.sinh(u), _SCALE * np.cosh(u) * step
     core, wing = np.exp(-(y**2)), _wing(y)

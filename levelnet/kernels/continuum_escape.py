@@ -48,7 +48,7 @@ def _cell(depths: FloatArray, mass: float, mass_by: float, h: FloatArray, out: F
     over = h[0] - share
     mean = share + over * q
     # By ln tau, ln c and a: of the share and of the depth.
-    turn_by = share * (tau * mass_by / total) if total > 0.0 else 0.0
+    turn_by = share * (tau * mass_by / total) if share > 0.0 else 0.0
     shares = (-turn, turn, -turn_by)
     totals = (line, continuum, tau * mass_by)
     out[0] += mass * mean

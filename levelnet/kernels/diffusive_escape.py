@@ -88,20 +88,23 @@ def escape_with_diffusion(
     count = 2 * half
     _profile(line[2], half, cells, work)
     _exchange((1.0 - p) * tau, half, cells, work)
-    # Rows 5 and 6: e and l. One elimination from the blue; the exits of a cell in its diagonal.
+    # Rows 5 and 6: e and l. Elimination from the blue; `stay` is what leaves a cell but not to the
+    # red, a sum of positive terms, so that the large exchange is never subtracted from itself.
+    stay = 0.0
     for i in range(count):
         width = cells[half - 1 - i if i < half else i - half, 0]
-        made, absorbed = p * tau * work[0, i], c * width
-        back = work[2, i - 1] if i > 0 else 0.0
-        onward = 1.0 + (work[2, i] if i < count - 1 else 0.0)
-        exits = onward + back + made + absorbed
-        source, lost = made, absorbed + (1.0 if i == count - 1 else 0.0)
+        source = p * tau * work[0, i]
+        lost = c * width + (1.0 if i == count - 1 else 0.0)
+        onward = work[2, i] + 1.0 if i < count - 1 else 1.0
+        sinks = source + c * width
         if i > 0:
-            before = 1.0 + work[2, i - 1]
-            exits -= before * back / work[7, i - 1]
-            source += before * work[5, i - 1] / work[7, i - 1]
-            lost += back * work[6, i - 1] / work[7, i - 1]
-        work[7, i], work[5, i], work[6, i] = exits, source, lost
+            back, exits = work[2, i - 1], work[7, i - 1]
+            source += (1.0 + back) * work[5, i - 1] / exits
+            lost += back * work[6, i - 1] / exits
+            stay = sinks + back * stay / exits
+        else:
+            stay = sinks
+        work[7, i], work[5, i], work[6, i] = onward + stay, source, lost
     for i in range(count - 1, -1, -1):
         if i < count - 1:
             work[5, i] += work[2, i] * work[5, i + 1]

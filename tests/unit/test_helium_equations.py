@@ -41,8 +41,7 @@ def test_jacobian_and_drift_are_exact(treatment: HeliumTreatment, feedback: bool
     equations, state = after_some_steps(treatment, feedback)
     s = -math.log1p(NOW)
     matrix, drift = equations.jacobian(s, state)
-    # Where the grid across a line ends moves in jumps of 1e-10 in P: no shorter steps.
-    step, differences = 1e-4, np.empty((4, 4))
+    step, differences = 1e-5, np.empty((4, 4))
     for k in range(4):
         shift = step * np.eye(4)[k]
         high, low = equations.rate(s, state + shift), equations.rate(s, state - shift)

@@ -24,7 +24,7 @@ DAMPINGS = (0.0, 5e-6, 2e-3, 0.03)
     [(0.0, 1e-12), (5e-6, 1e-12), (2e-3, 1e-9), (1e-2, 1e-6), (0.03, 1e-5)],
 )
 def test_profile_is_that_of_scipy(damping: float, tolerance: float) -> None:
-    step = 0.03
+    step = 1.0 / 36.0
     cells = helium_profile._cells(step)
     y = 2.0 * np.sinh((np.arange(len(cells)) + 0.5) * step)
     series = cells[:, 1:] @ damping ** np.arange(4) / cells[:, 0]
@@ -153,5 +153,5 @@ def test_wrong_input(wrong: tuple[float, float, float]) -> None:
 
 
 def test_the_kernel_refuses_more_cells_than_there_are() -> None:
-    cells, out = helium_profile._cells(0.03), np.empty(4)
+    cells, out = helium_profile._cells(1.0 / 36.0), np.empty(4)
     assert escape_with_continuum(1.0, 0.0, 0.0, len(cells) + 1, cells, out) == 1
