@@ -111,11 +111,11 @@ class Past:
         for line in range(count - 1):
             then = time - float(self.delay[line])
             if self.time and then > self.time[0]:
-                value[line], slope[line] = self._interpolated(then, line + 1)
+                value[line], slope[line] = self.at(then, line + 1)
         return BlueSide(value, slope, hubble_slope)
 
-    def _interpolated(self, time: float, line: int) -> tuple[float, float]:
-        """Cubic through the four nearest remembered steps, and its slope."""
+    def at(self, time: float, line: int) -> tuple[float, float]:
+        """Of one line: the cubic through the four nearest remembered steps, and its slope."""
         first = min(max(0, bisect_right(self.time, time) - 2), max(0, len(self.time) - 4))
         knots = self.time[first : first + 4]
         value = slope = 0.0

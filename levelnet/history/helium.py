@@ -15,7 +15,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
-from typing import NamedTuple
+from typing import Any, NamedTuple
 
 import numpy as np
 
@@ -23,9 +23,13 @@ from .. import constants as const
 from ..arrays import FloatArray
 from ..atomic.detailed_balance import log_saha_factor
 from ..background.conditions import Conditions
+from ..escape.blue_side import log_red_side
+from ..escape.helium_continuum import continuum_depth
+from ..escape.helium_past import HeliumPast
+from ..escape.helium_treatment import HeliumTreatment, Seen
 from ..escape.treatment import LineTreatment, ResonanceLines
 from ..network.coupling import GroundCoupling, with_decay
-from ..network.gradient import flow_slopes, net_flow_gradient
+from ..network.gradient import FlowGradient, flow_slopes, net_flow_gradient
 from ..network.reduced import Reduced
 from ..network.solve import log_boltzmann_populations, solve_kept
 from .local import Local
@@ -49,6 +53,10 @@ class Around(NamedTuple):
         n_e/n_He.
     hubble_slope : float
         d ln H/d ln a.
+    neutral_hydrogen_cm3 : float, cm^-3
+        n_HI; of no account to Saha equilibrium.
+    log_scale : float
+        ln a, to which the run's memory of the lines is referred.
     """
 
     radiation_temperature_k: float
@@ -57,6 +65,8 @@ class Around(NamedTuple):
     hubble_rate_per_s: float
     electrons_per_helium: float
     hubble_slope: float
+    neutral_hydrogen_cm3: float = 0.0
+    log_scale: float = 0.0
 
 
 class HeliumFractions(NamedTuple):
@@ -101,6 +111,8 @@ class Flow(NamedTuple):
         By ln of n_e, of both fractions, and of T_m.
     by_time : float, s^-1
         By ln a with the state held, less F d ln H/d ln a, which the prefactor 1/H takes.
+    by_neutral_hydrogen : float, s^-1
+        By ln n_HI.
     """
 
     value: float
@@ -109,10 +121,11 @@ class Flow(NamedTuple):
     by_ground: float
     by_matter: float
     by_time: float
+    by_neutral_hydrogen: float
 
 
 class Rates(NamedTuple):
-    """(da/ds, db/ds) and their derivatives; shapes (2,), (2, 2), (2,), (2,), (2,).
+    """(da/ds, db/ds) and their derivatives; shapes (2,), (2, 2), (2,), (2,), (2,), (2,).
 
     Attributes
     ----------
@@ -120,8 +133,8 @@ class Rates(NamedTuple):
         The rates.
     by_own : ndarray
         By a and b, with n_e held.
-    by_electrons, by_matter, by_time : ndarray
-        By ln n_e, by v, by ln a.
+    by_electrons, by_matter, by_time, by_neutral_hydrogen : ndarray
+        By ln n_e, by v, by ln a, by ln n_HI.
     """
 
     rate: FloatArray
@@ -129,6 +142,7 @@ class Rates(NamedTuple):
     by_electrons: FloatArray
     by_matter: FloatArray
     by_time: FloatArray
+    by_neutral_hydrogen: FloatArray
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -141,7 +155,7 @@ class IonNetwork:
         Its interior.
     lines : ResonanceLines
         Lines to the ground state.
-    treatment : LineTreatment
+    treatment : LineTreatment, or HeliumTreatment for He I
         How their photons escape.
     decay : int
         Position of the kept level that decays by two photons.
@@ -151,31 +165,39 @@ class IonNetwork:
 
     reduced: Reduced
     lines: ResonanceLines
-    treatment: LineTreatment
+    treatment: LineTreatment | HeliumTreatment
     decay: int
     decay_rate_per_s: float
 
-    def solve(self, conditions: Conditions) -> Local:
-        """Kept levels at these conditions; densities and fractions are those of the element."""
+    def solve(self, conditions: Conditions, seen: Seen | None = None) -> Local:
+        """Kept levels at these conditions; densities and fractions are those of the element.
+
+        `seen` is for a HeliumTreatment alone.
+        """
         kept = self.reduced.kept
         rates = self.reduced.rates(
             conditions.radiation_temperature_k, conditions.matter_temperature_k
         )
-        coupling = self._coupling(conditions)
+        coupling = self._coupling(conditions, seen)
         return Local(conditions, rates, coupling, solve_kept(kept, rates, coupling, conditions))
 
-    def _coupling(self, conditions: Conditions) -> GroundCoupling:
+    def _coupling(self, conditions: Conditions, seen: Seen | None) -> GroundCoupling:
         kept = self.reduced.kept
-        lines = self.treatment.couple(self.lines, kept, conditions)
+        treatment: Any = self.treatment  # He I takes lines of its own, and what they see
+        if seen is None:
+            lines = treatment.couple(self.lines, kept, conditions)
+        else:
+            lines = treatment.couple(self.lines, kept, conditions, seen)
         log_boltzmann = log_boltzmann_populations(
             kept, conditions.radiation_temperature_k, conditions.ground_fraction
         )
         here = math.exp(float(log_boltzmann[self.decay]))
         return with_decay(lines, self.decay, self.decay_rate_per_s, 0.0, here)
 
-    def flow(self, around: Around, ion: float, ground: float) -> Flow:
-        """Net recombinations and their derivatives."""
-        conditions = Conditions(
+    @staticmethod
+    def conditions(around: Around, ion: float, ground: float) -> Conditions:
+        """Give conditions of a stage with these fractions of ions and of ground states."""
+        return Conditions(
             around.radiation_temperature_k,
             around.matter_temperature_k,
             around.helium_density_cm3,
@@ -184,7 +206,11 @@ class IonNetwork:
             ion,
             ground,
         )
-        here = self.solve(conditions)
+
+    def flow(self, around: Around, ion: float, ground: float, seen: Seen | None = None) -> Flow:
+        """Net recombinations and their derivatives."""
+        conditions = self.conditions(around, ion, ground)
+        here = self.solve(conditions, seen)
         gradient = net_flow_gradient(here.rates, here.coupling, here.solution)
         slopes = flow_slopes(self.reduced.kept, here.rates, here.coupling, conditions, gradient)
         value = here.solution.net_flow
@@ -194,6 +220,8 @@ class IonNetwork:
             - 3.0 * slopes.ln_hydrogen_density
             + around.hubble_slope * (slopes.ln_hubble_rate - value)
         )
+        by_continuum, by_excess, excess_by_time = _surroundings(here.coupling, gradient)
+        by_time += excess_by_time - (3.0 + around.hubble_slope) * by_continuum
         return Flow(
             value,
             slopes.ln_electron_fraction,
@@ -201,7 +229,22 @@ class IonNetwork:
             slopes.ln_ground_fraction,
             slopes.ln_matter_temperature,
             by_time,
+            by_continuum + by_excess,
         )
+
+
+def _surroundings(coupling: GroundCoupling, gradient: FlowGradient) -> tuple[float, float, float]:
+    """Of a flow: by ln(n_HI/H) inside lines; by ln n_HI between them; by ln a of their fields."""
+    inside, between, time = (
+        coupling.slope_continuum,
+        coupling.excess_by_continuum,
+        coupling.excess_by_time,
+    )
+    return (
+        0.0 if inside is None else float((gradient.loss * inside).sum()),
+        0.0 if between is None else float(gradient.excess @ between),
+        0.0 if time is None else float(gradient.excess @ time),
+    )
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -211,16 +254,19 @@ class HeliumEquations:
     Attributes
     ----------
     first : IonNetwork
-        He I.
+        He I, with a HeliumTreatment.
     second : IonNetwork or None
         He II; None: Saha equilibrium.
     ionization_ev : tuple of float, eV
         Of He I and of He II, each from its ground state.
+    past : HeliumPast or None
+        What the run remembers of the lines of He I, where one lights another (`lines.fed`).
     """
 
     first: IonNetwork
     second: IonNetwork | None
     ionization_ev: tuple[float, float]
+    past: HeliumPast | None = None
 
     @staticmethod
     def fractions(state: FloatArray) -> HeliumFractions:
@@ -235,15 +281,60 @@ class HeliumEquations:
         """Rates of change and derivatives at (a, b)."""
         x = self.fractions(state)
         if not min(x.neutral, x.single) > 0.0:  # a trial far off; the step is taken again
-            return Rates(*(np.full(shape, np.nan) for shape in ((2,), (2, 2), (2,), (2,), (2,))))
-        first = self.first.flow(around, x.single, x.neutral)
+            return Rates(
+                *(np.full(shape, np.nan) for shape in ((2,), (2, 2), (2,), (2,), (2,), (2,)))
+            )
+        first = self.first.flow(around, x.single, x.neutral, self._seen(around))
         lowest = self._first_rates(around, x, first)
         if self.second is None:
             return _stacked(lowest, self._saha_rates(around, float(state[1])))
         if state[1] < _GONE:
-            return _stacked(lowest, [0.0] * 6)
+            return _stacked(lowest, [0.0] * 7)
         second = self.second.flow(around, x.double, x.single)
         return _stacked(lowest, _second_rates(around, x, first, second))
+
+    def _seen(self, around: Around) -> Seen:
+        """What the lines of He I see of hydrogen and of each other."""
+        hydrogen_cm3 = around.neutral_hydrogen_cm3
+        if self.past is None:
+            return Seen(hydrogen_cm3)
+        depth = None
+        if isinstance(self.first.treatment, HeliumTreatment) and self.first.treatment.absorbs:
+            depth = continuum_depth(self.past.lines, hydrogen_cm3, around.hubble_rate_per_s)
+        return Seen(hydrogen_cm3, self.past.blue_side(around.log_scale, around.hubble_slope, depth))
+
+    def first_local(self, around: Around, state: FloatArray) -> Local:
+        """Kept levels of He I at (a, b)."""
+        x = self.fractions(state)
+        conditions = self.first.conditions(around, x.single, x.neutral)
+        return self.first.solve(conditions, self._seen(around))
+
+    def line_figures(self, around: Around, state: FloatArray) -> dict[str, FloatArray]:
+        """Validity figures of the lines of He I at (a, b), shape (n_lines,) each.
+
+        Those of the treatment, with the ln of the distortion of the field on both sides,
+        "log_blue_side" and "log_red_side".
+        """
+        here, lines = self.first_local(around, state), self.first.lines
+        departure = here.solution.log_population - here.solution.log_boltzmann
+        kt = const.BOLTZMANN_EV_K * around.radiation_temperature_k
+        figures = here.coupling.validity
+        blue = figures.get("log_blue_side", np.zeros(len(lines.names)))
+        red = log_red_side(
+            departure[lines.upper], lines.energy_ev / kt, figures["optical_depth"], blue
+        )
+        return {**figures, "log_blue_side": blue, "log_red_side": red}
+
+    def remember(self, around: Around, state: FloatArray) -> None:
+        """Keep what an accepted step sends to lines below."""
+        if self.past is None:
+            return
+        depth = continuum_depth(
+            self.past.lines, around.neutral_hydrogen_cm3, around.hubble_rate_per_s
+        )
+        self.past.remember(
+            around.log_scale, self.line_figures(around, state)["log_red_side"], depth
+        )
 
     @staticmethod
     def _first_rates(around: Around, x: HeliumFractions, flow: Flow) -> list[float]:
@@ -251,7 +342,15 @@ class HeliumEquations:
         by_a = flow.by_ion * x.neutral - flow.by_ground * x.charged
         by_a -= flow.value * (x.neutral - x.charged)
         by_b = -flow.by_ion * x.double_share
-        terms = (flow.value, by_a, by_b, flow.by_electrons, flow.by_matter, flow.by_time)
+        terms = (
+            flow.value,
+            by_a,
+            by_b,
+            flow.by_electrons,
+            flow.by_matter,
+            flow.by_time,
+            flow.by_neutral_hydrogen,
+        )
         return [scale * one for one in terms]
 
     def _saha_rates(self, around: Around, b: float) -> list[float]:
@@ -259,7 +358,7 @@ class HeliumEquations:
         slope = -1.5 - self.ionization_ev[1] / (const.BOLTZMANN_EV_K * matter_k)
         pulled = self.saha_log_ratio(1, around) - b
         # Value, by a, by b, by ln n_e, by v, by ln a (T falls, n_e falls as a^-3).
-        terms = (pulled, 0.0, -1.0, -1.0, -slope, slope + 3.0)
+        terms = (pulled, 0.0, -1.0, -1.0, -slope, slope + 3.0, 0.0)
         return [_PULL * one for one in terms]
 
     def saha_log_ratio(self, stage: int, around: Around) -> float:
@@ -288,13 +387,14 @@ def _second_rates(around: Around, x: HeliumFractions, first: Flow, second: Flow)
         second.by_electrons * inverse - first.by_electrons / x.single,
         second.by_matter * inverse - first.by_matter / x.single,
         second.by_time * inverse - first.by_time / x.single,
+        -first.by_neutral_hydrogen / x.single,
     )
     return [-one / around.hubble_rate_per_s for one in terms]
 
 
 def _stacked(first: list[float], second: list[float]) -> Rates:
     rows = np.array([first, second])
-    return Rates(rows[:, 0], rows[:, 1:3], rows[:, 3], rows[:, 4], rows[:, 5])
+    return Rates(rows[:, 0], rows[:, 1:3], rows[:, 3], rows[:, 4], rows[:, 5], rows[:, 6])
 
 
 def _split(log_odds: float) -> tuple[float, float]:

@@ -27,6 +27,10 @@ class GroundCoupling:
     excess_by_ground, excess_by_time : ndarray, shape (n_kept,), s^-1
         Its derivatives by ln of the ground population, and by ln a with the populations held; None
         where it is zero.
+    slope_continuum : ndarray, shape (n_kept, n_kept), s^-1, or None
+        dK/d ln(n_HI/H), where absorption by neutral hydrogen inside a line of helium counts.
+    excess_by_continuum : ndarray, shape (n_kept,), s^-1, or None
+        Derivative of the excess source by ln n_HI, where it counts between the lines.
     validity : mapping of str to ndarray
         Figures per line by which the treatment can be judged.
     """
@@ -39,6 +43,8 @@ class GroundCoupling:
     validity: dict[str, FloatArray] = field(default_factory=dict)
     excess_by_ground: FloatArray | None = None
     excess_by_time: FloatArray | None = None
+    slope_continuum: FloatArray | None = None
+    excess_by_continuum: FloatArray | None = None
 
 
 def blackbody_coupling(
@@ -120,6 +126,8 @@ def with_line_factors(
         excess_source=coupling.excess_source * by_level,
         excess_by_ground=_times(coupling.excess_by_ground, by_level),
         excess_by_time=_times(coupling.excess_by_time, by_level),
+        slope_continuum=_times(coupling.slope_continuum, by_level[:, None]),
+        excess_by_continuum=_times(coupling.excess_by_continuum, by_level),
     )
 
 

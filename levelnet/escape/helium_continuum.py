@@ -1,0 +1,160 @@
+"""Escape from lines of He I inside which neutral hydrogen absorbs."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import ClassVar, Literal, NamedTuple, get_args
+
+import numpy as np
+
+from .. import constants as const
+from ..arrays import FloatArray
+from ..background.conditions import Conditions
+from ..errors import InputError
+from .helium_lines import HeliumGroundLines
+from .helium_profile import LARGEST_DAMPING, continuum_escape, diffusive_escape
+from .helium_treatment import Chances, HeliumSobolev, HeliumSobolevFeedback, HeliumTreatment
+
+Redistribution = Literal["doppler", "complete", "partial"]
+
+# p tau above which a line is thick to true absorption, so that P of diffusing photons joins the
+# other within 1/(p tau): near z = 3000 for 584 A, while He I is in Saha equilibrium.
+_THICK = 1e3
+
+
+class _Shapes(NamedTuple):
+    """Voigt parameter and incoherent fraction of each line, and their slopes by ln T_r."""
+
+    damping: FloatArray
+    damping_slope: FloatArray
+    incoherent: FloatArray
+    incoherent_slope: FloatArray
+
+
+@dataclass(frozen=True, slots=True)
+class HeliumContinuum(HeliumTreatment):
+    """Photoionization of hydrogen inside the lines and, where one lights another, between them.
+
+    Parameters
+    ----------
+    redistribution : "doppler", "complete" or "partial"
+        Over which profile a line makes and destroys photons: its Doppler core alone (coherent
+        wings); the Voigt profile of the whole natural width; or that with the damping scaled by
+        the incoherent fraction, the chance that the upper level leaves to another level than the
+        ground state.
+    diffusion : bool
+        Of "partial" alone: coherent scattering in the whole natural profile shifts photons by
+        Doppler widths (rms), from the core into the wings. In lines with p tau above 1000, p the
+        incoherent fraction: 2 1P and higher.
+    """
+
+    redistribution: Redistribution = "partial"
+    diffusion: bool = False
+    name: ClassVar[str] = "continuum"
+    absorbs: ClassVar[bool] = True
+    assumes: ClassVar[tuple[str, ...]] = (
+        "Coherent scattering makes and destroys no photons; without `diffusion` it moves none.",
+        "Continuum, source function and Doppler width are constant across a line; the continuum is "
+        "a blackbody at T_r, the Doppler width that of T_r.",
+        "Photons from a line above are absorbed as in Sobolev's line.",
+    )
+    holds_for: ClassVar[tuple[str, ...]] = (
+        "Doppler core alone and complete redistribution change x_e by 1 to 1.3 and 1 to 3.8 per "
+        "cent against partial redistribution (Kholupenko, Ivanchik & Varshalovich 2008, Astron. "
+        "Lett. 34, 725; volume and page from memory).",
+        "Diffusion raises the escape from 584 A by 14 per cent at z = 2000 and 44 at 1850, and "
+        "lowers x_e by up to 0.28 per cent near z = 1830 (n_max 10).",
+    )
+
+    def __post_init__(self) -> None:
+        """Refuse what is not known."""
+        known = get_args(Redistribution)
+        if self.redistribution not in known:
+            raise InputError(f'redistribution = "{self.redistribution}": known are {known}')
+        if self.diffusion and self.redistribution != "partial":
+            raise InputError('diffusion: only with redistribution = "partial"')
+
+    def escape(
+        self,
+        lines: HeliumGroundLines,
+        conditions: Conditions,
+        optical_depth: FloatArray,
+        neutral_hydrogen_cm3: float,
+    ) -> Chances:
+        """P of every line, with the continuum inside it."""
+        width = doppler_width(conditions.radiation_temperature_k)
+        per_log = continuum_depth(lines, neutral_hydrogen_cm3, conditions.hubble_rate_per_s)
+        shape = self._shapes(lines, conditions)
+        continuum = per_log * width
+        columns = (optical_depth, continuum, *shape)
+        found = [self._chance(*one) for one in np.stack(columns, axis=1).tolist()]
+        value, by_depth, by_continuum, by_shape = np.array(found).reshape(-1, 4).T
+        validity = {
+            "continuum_depth": continuum,
+            "damping": shape.damping,
+            "incoherent_fraction": shape.incoherent,
+        }
+        # The Doppler width goes as the square root of T.
+        return Chances(value, by_depth, by_continuum, 0.5 * by_continuum + by_shape, validity)
+
+    def _chance(
+        self,
+        depth: float,
+        continuum: float,
+        damping: float,
+        damping_slope: float,
+        incoherent: float,
+        incoherent_slope: float,
+    ) -> tuple[float, float, float, float]:
+        """P of one line, its derivatives by ln tau and ln c, and by ln T through the shape."""
+        natural = damping / incoherent
+        if not self.diffusion or depth * incoherent < _THICK or natural > LARGEST_DAMPING:
+            plain = continuum_escape(depth, continuum, damping)
+            return (*plain[:3], plain.by_damping * damping_slope)
+        moved, by_incoherent = diffusive_escape(depth, continuum, natural, incoherent)
+        natural_slope = (damping_slope - natural * incoherent_slope) / incoherent
+        by_shape = moved.by_damping * natural_slope + by_incoherent * incoherent_slope
+        return (*moved[:3], by_shape)
+
+    def _shapes(self, lines: HeliumGroundLines, conditions: Conditions) -> _Shapes:
+        radiation_k = conditions.radiation_temperature_k
+        other, slope = lines.others.total(radiation_k)
+        total = lines.ground_rate_per_s + other
+        incoherent, turn = other / total, slope * lines.ground_rate_per_s / total**2
+        if self.redistribution == "doppler":
+            nothing = np.zeros_like(total)
+            return _Shapes(nothing, nothing, incoherent, turn)
+        frequency = lines.energy_ev / const.PLANCK_EV_S
+        scale = 1.0 / (4.0 * np.pi * frequency * doppler_width(radiation_k))
+        rate = total if self.redistribution == "complete" else other
+        damping, by = rate * scale, (slope - 0.5 * rate) * scale
+        # Reached below 30 K alone, where no helium is left to recombine.
+        beyond = damping > LARGEST_DAMPING
+        damping, by = np.where(beyond, LARGEST_DAMPING, damping), np.where(beyond, 0.0, by)
+        return _Shapes(damping, by, incoherent, turn)
+
+
+def doppler_width(temperature_k: float) -> float:
+    """Doppler width of helium in ln nu, sqrt(2 k T/M)/c (dimensionless)."""
+    mass_g = const.HELIUM_MASS_U * const.ELECTRON_MASS_G / const.ELECTRON_MASS_U
+    speed = np.sqrt(2.0 * const.BOLTZMANN_ERG_K * temperature_k / mass_g)
+    return float(speed / const.SPEED_OF_LIGHT_CM_S)
+
+
+def continuum_depth(
+    lines: HeliumGroundLines, neutral_hydrogen_cm3: float, hubble_rate_per_s: float
+) -> FloatArray:
+    """Depth n_HI sigma c/H of the H I continuum per ln nu at each line (dimensionless)."""
+    column = neutral_hydrogen_cm3 * const.SPEED_OF_LIGHT_CM_S / hubble_rate_per_s
+    depth: FloatArray = lines.hydrogen_cross_section_cm2 * column
+    return depth
+
+
+HELIUM_TREATMENTS: tuple[HeliumTreatment, ...] = (
+    HeliumSobolev(),
+    HeliumSobolevFeedback(),
+    HeliumContinuum("doppler"),
+    HeliumContinuum("complete"),
+    HeliumContinuum("partial"),
+    HeliumContinuum("partial", diffusion=True),
+)

@@ -1,0 +1,112 @@
+"""Escape from a line inside which a continuum absorbs, compiled: one march across the profile.
+
+With y the frequency from line centre in Doppler widths, tau the depth of the line, c that of the
+continuum per Doppler width and h = (f_L - f)/(f_L - f_bb),
+
+    dh/dy = (tau phi + c) h - c    from h = 1 at y = inf,    P = int phi h dy.
+
+In each cell phi is constant and h the exact exponential, so that c = 0 gives (1 - e^-tau)/tau on
+any grid whose masses sum to 1.
+"""
+
+import math
+
+import numpy as np
+from numpy.typing import NDArray
+
+from .compile import kernel
+
+FloatArray = NDArray[np.float64]
+
+
+@kernel
+def _mean_decay(depth: float) -> tuple[float, float]:
+    """Give q = (1 - e^-D)/D and dq/dD."""
+    if depth < 1e-3:
+        q = 1.0 - depth * (0.5 - depth * (1.0 / 6.0 - depth / 24.0))
+        return q, -0.5 + depth * (1.0 / 3.0 - depth * (0.125 - depth / 30.0))
+    q = -math.expm1(-depth) / depth
+    return q, (math.exp(-depth) - q) / depth
+
+
+@kernel
+def _mass(row: FloatArray, a: float) -> tuple[float, float]:
+    """Profile times cell width at damping a, and its derivative by a."""
+    value = row[1] + a * (row[2] + a * (row[3] + a * row[4]))
+    return value, row[2] + a * (2.0 * row[3] + a * 3.0 * row[4])
+
+
+@kernel
+def _cell(depths: FloatArray, mass: float, mass_by: float, h: FloatArray, out: FloatArray) -> None:
+    """Carry h and its derivatives across one cell; add what escapes there."""
+    tau, line, continuum = depths[0], depths[0] * mass, depths[1]
+    total = line + continuum
+    share = continuum / total if total > 0.0 else 0.0
+    turn = share * (line / total) if total > 0.0 else 0.0
+    decay = math.exp(-total)
+    q, q_by = _mean_decay(total)
+    over = h[0] - share
+    mean = share + over * q
+    # By ln tau, ln c and a: of the share and of the depth.
+    turn_by = share * (tau * mass_by / total) if share > 0.0 else 0.0
+    shares = (-turn, turn, -turn_by)
+    totals = (line, continuum, tau * mass_by)
+    out[0] += mass * mean
+    for k in range(3):
+        mean_by = shares[k] * (1.0 - q) + h[k + 1] * q + over * q_by * totals[k]
+        out[k + 1] += mass * mean_by
+        h[k + 1] = shares[k] * (1.0 - decay) + h[k + 1] * decay - over * decay * totals[k]
+    out[3] += mass_by * mean
+    h[0] = share + over * decay
+
+
+@kernel
+def escape_with_continuum(
+    tau: float, c: float, a: float, half: int, cells: FloatArray, out: FloatArray
+) -> int:
+    """Escape probability and its derivatives.
+
+    Parameters
+    ----------
+    tau, c, a : float, dimensionless
+        Depth of the line; of the continuum per Doppler width; damping.
+    half : int
+        Cells to use on each side of line centre.
+    cells : ndarray, shape (>= half, 5)
+        For y > 0, ascending: cell width; the coefficients of 1, a, a^2 and a^3 of phi times it.
+    out : ndarray, shape (4,)
+        P, dP/d ln tau, dP/d ln c, dP/da.
+
+    Returns
+    -------
+    int
+        0; 1 if `half` is not within the cells.
+    """
+    if half < 1 or half > cells.shape[0]:
+        return 1
+    # Beyond the last cell, its edge taken as the sum of widths: phi = a/(pi y^2).
+    edge = 0.0
+    total, total_by = 0.0, 0.0
+    for i in range(half):
+        edge += cells[i, 0]
+        mass, by = _mass(cells[i], a)
+        total += 2.0 * mass
+        total_by += 2.0 * by
+    tail_by = 1.0 / (math.pi * edge)
+    total += 2.0 * a * tail_by
+    total_by += 2.0 * tail_by
+    h = np.zeros(4)
+    h[0] = 1.0
+    out[:] = 0.0
+    depths = np.array([tau, c * edge])
+    for step in range(-1, 2 * half + 1):
+        if step == -1 or step == 2 * half:
+            mass, by = a * tail_by, tail_by
+            depths[1] = c * edge
+        else:
+            i = half - 1 - step if step < half else step - half
+            mass, by = _mass(cells[i], a)
+            depths[1] = c * cells[i, 0]
+        mass /= total
+        _cell(depths, mass, by / total - mass * total_by / total, h, out)
+    return 0
