@@ -39,6 +39,10 @@ from .helium import Rates as HeliumRates
 from .local import Local
 
 
+# No variable is ever so large: fractions would leave the doubles.
+_ASTRAY = 700.0
+
+
 class Background(NamedTuple):
     """What the cosmology says at one time.
 
@@ -123,6 +127,10 @@ class SlowEquations:
         What the run remembers of the lines' red sides, where the treatment sees blue sides.
     helium : HeliumEquations or None
         Where helium recombines too; None: it is neutral and inert.
+
+    Notes
+    -----
+    The state is (u, v), with helium (u, v, a, b).
     """
 
     cosmology: Cosmology
@@ -218,7 +226,9 @@ class SlowEquations:
         return with_line_factors(coupling, self.lines.upper, self.escape_factor)
 
     def rate(self, log_scale: float, state: FloatArray) -> FloatArray:
-        """(du/ds, dv/ds), with helium (da/ds, db/ds) too."""
+        """(du/ds, dv/ds), with helium (da/ds, db/ds) too; NaN where a trial step has gone astray."""
+        if np.abs(state).max() > _ASTRAY:
+            return np.full(len(state), np.nan)
         here = self.local(log_scale, state)
         rate = self._rate_of(here, state)
         if self.helium is None:

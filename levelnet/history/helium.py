@@ -8,7 +8,7 @@ HeII per helium nucleus and second, and y = 1 - x_HeI,
     db/ds = -[F_2 (1/x_HeIII + 1/x_HeII) - F_1/x_HeII]/H.
 
 Where the second ionization is in Saha equilibrium, b is pulled to its value there so fast that it
-stays within 1e-8 of it.
+stays within 1e-8 of it. Below T_r = 1400 K both stand still.
 """
 
 from __future__ import annotations
@@ -30,9 +30,14 @@ from ..network.reduced import Reduced
 from ..network.solve import log_boltzmann_populations, solve_kept
 from .local import Local
 
-# Pull to Saha equilibrium in Hubble rates, and ln of x_HeIII/x_HeII at which it is held: nothing of
-# it is left to see.
-_PULL, _GONE = 1e9, -40.0
+COLDEST_K = 1400.0
+"""T_r below which helium is held as it is, in K: x_HeII is below 1e-9 and falls no further."""
+
+# Pull to Saha equilibrium in Hubble rates, and ln of x_HeIII/x_HeII at which it is held: near what
+# the doubles can hold.
+_PULL, _GONE = 1e9, -690.0
+# The end of a table may stand a rounding below the T_r that was asked.
+_EDGE = 1.0 + 1e-12
 ION_WEIGHT = 2.0  # of He+ in its ground state
 
 
@@ -234,13 +239,13 @@ class HeliumEquations:
     def rates(self, around: Around, state: FloatArray) -> Rates:
         """Rates of change and derivatives at (a, b)."""
         x = self.fractions(state)
-        if not min(x.neutral, x.single) > 0.0:  # a trial far off; the step is taken again
-            return Rates(*(np.full(shape, np.nan) for shape in ((2,), (2, 2), (2,), (2,), (2,))))
+        if around.radiation_temperature_k < COLDEST_K * _EDGE:
+            return _stacked([0.0] * 6, [0.0] * 6)
         first = self.first.flow(around, x.single, x.neutral)
         lowest = self._first_rates(around, x, first)
         if self.second is None:
             return _stacked(lowest, self._saha_rates(around, float(state[1])))
-        if state[1] < _GONE:
+        if state[1] < _GONE or x.double == 0.0:
             return _stacked(lowest, [0.0] * 6)
         second = self.second.flow(around, x.double, x.single)
         return _stacked(lowest, _second_rates(around, x, first, second))

@@ -20,12 +20,14 @@ from ..network.reduced import Reduced
 from ..network.scaled import with_scales
 from ..network.tabulation import TabulatedReduction, live_reduction, node_count, tabulate
 from ..numerics.stepping import Trajectory, integrate
-from ..pieces import Pieces, code_digest, content_key
+from ..pieces import Pieces, code_digest
 from .atom import build_ladder, open_lyman_lines, resonance_lines
 from .cost import table_tolerance
 from .course import Course
 from .equations import SlowEquations
 from .field import FieldRun, resolve_field
+from .helium import COLDEST_K, HeliumEquations
+from .helium_atom import HeliumAtoms, Recall, build_helium, recall_from
 from .setup import Setup
 from .start import Handover, equilibrium_state, find_handover
 
@@ -59,12 +61,15 @@ class Integrated(Course):
         The reduced network with the measured constants; `equations` holds it with the setup's.
     field : FieldRun or None
         The march behind it, where the treatment resolves the field.
+    helium : HeliumAtoms or None
+        Helium, where it recombines.
     """
 
     ladder: Ladder
     redshift: FloatArray
     measured: Reduced
     field: FieldRun | None = None
+    helium: HeliumAtoms | None = None
 
 
 def integrate_history(
@@ -90,12 +95,17 @@ def integrate_history(
     """
     tell("atomic data", 0.0)
     chosen = line_treatment or member(setup.lines.hydrogen)
-    handover = setup_handover(setup, chosen)
+    redshift = output_redshifts(setup)
+    atoms = None
+    if setup.helium_recombines:
+        hottest_k = float(setup.cosmology.radiation_temperature_k(float(redshift[0])))
+        atoms = build_helium(setup, hottest_k, tell, pieces)
+    helium = None if atoms is None else atoms.equations
+    handover = setup_handover(setup, chosen, helium)
     resolved = isinstance(chosen, ResolvedField)
     if start_above > handover.redshift and not resolved:
         handover = Handover(start_above, handover.departure)
     ladder = build_ladder(setup, keeps=(*chosen.keeps, *setup.lines.field_levels, *keeps))
-    redshift = output_redshifts(setup)
     factor = scales(setup.physics)
     reduced: Reduced = live_reduction(ladder)
     if setup.accuracy.interpolate:
@@ -104,20 +114,22 @@ def integrate_history(
             low = _later(_march_redshifts(handover, redshift)[-1], _BEYOND)
         span = min(low, handover.redshift), high
         reduced = _table(setup, ladder, span, tell, pieces)
-    equations = slow_equations(setup, with_scales(reduced, factor), chosen)
+    equations = slow_equations(setup, with_scales(reduced, factor), chosen, helium)
     if resolved:
         run = march_field(setup, equations, handover, redshift, tell)
         return Integrated(run.equations, handover, run.trajectory, ladder, redshift, reduced, run)
     trajectory = integrate_slow(setup, equations, handover, redshift, tell)
-    return Integrated(equations, handover, trajectory, ladder, redshift, reduced)
+    return Integrated(equations, handover, trajectory, ladder, redshift, reduced, helium=atoms)
 
 
-def setup_handover(setup: Setup, chosen: LineTreatment | None = None) -> Handover:
+def setup_handover(
+    setup: Setup, chosen: LineTreatment | None = None, helium: HeliumEquations | None = None
+) -> Handover:
     """Where a run starts: found with a small atom, since only the lowest levels matter there."""
     keeps = () if chosen is None else chosen.keeps
     scout = build_ladder(setup, min(setup.hydrogen.n_max, _SCOUT_N), keeps)
     reduced = with_scales(live_reduction(scout), scales(setup.physics))
-    return handover_of(setup, slow_equations(setup, reduced, chosen))
+    return handover_of(setup, slow_equations(setup, reduced, chosen, helium))
 
 
 def handover_of(setup: Setup, equations: SlowEquations) -> Handover:
@@ -175,7 +187,10 @@ def _later(redshift: float, log_growth: float) -> float:
 
 
 def slow_equations(
-    setup: Setup, reduced: Reduced, chosen: LineTreatment | None = None
+    setup: Setup,
+    reduced: Reduced,
+    chosen: LineTreatment | None = None,
+    helium: HeliumEquations | None = None,
 ) -> SlowEquations:
     """Equations of a setup on a reduced network that already has the setup's constants.
 
@@ -187,6 +202,8 @@ def slow_equations(
         The interior of the atom; only the setup's open Lyman lines are used of its np levels.
     chosen : LineTreatment, optional
         In place of the one the setup names.
+    helium : HeliumEquations, optional
+        Where helium recombines.
     """
     factor = scales(setup.physics)
     lines = resonance_lines(reduced.kept, open_lyman_lines(setup), factor, setup.rates.network)
@@ -203,6 +220,7 @@ def slow_equations(
         replace(factor, compton_rate=factor.compton_rate * setup.rates.compton_factor),
         setup.rates.escape_factors(reduced.kept.n[lines.upper]),
         Past.of(lines.energy_ev) if remembers else None,
+        helium,
     )
 
 
@@ -242,12 +260,9 @@ def _table(
     return tabulate(ladder, low_k, high_k, tolerance, on_node, _recall(setup, ladder, pieces))
 
 
-def _recall(
-    setup: Setup, ladder: Ladder, pieces: Pieces | None
-) -> Callable[[float, Callable[[float], FloatArray]], FloatArray] | None:
-    if pieces is None:
-        return None
-    atom = content_key(
+def _recall(setup: Setup, ladder: Ladder, pieces: Pieces | None) -> Recall | None:
+    return recall_from(
+        pieces,
         "reduction",
         code_digest(("constants", "kernels", "numerics", "atomic", "network")),
         ladder.species,
@@ -260,16 +275,15 @@ def _recall(
         *(one.key for one in setup.rates.network),
     )
 
-    def recall(temperature_k: float, compute: Callable[[float], FloatArray]) -> FloatArray:
-        key = content_key(atom, temperature_k)
-        found = pieces.get(key)
-        if found is not None and set(found) == {"node"}:
-            return found["node"]
-        value = compute(temperature_k)
-        pieces.put(key, {"node": value})
-        return value
 
-    return recall
+def _ends(equations: SlowEquations, start: float, redshift: FloatArray) -> list[float]:
+    """Times at which steps end: outputs, and the moment when helium is held."""
+    outputs = [s for s in (-np.log1p(redshift)).tolist() if s > start]
+    if equations.helium is None or not outputs:
+        return outputs
+    today = float(equations.cosmology.radiation_temperature_k(0.0))
+    held = math.log(today / COLDEST_K)
+    return sorted({*outputs, held}) if start < held < outputs[-1] else outputs
 
 
 def integrate_slow(
@@ -282,7 +296,7 @@ def integrate_slow(
     """Integrate from the hand-over to the last output."""
     start = -math.log1p(handover.redshift)
     state, _ = equilibrium_state(equations, start)
-    outputs = [s for s in (-np.log1p(redshift)).tolist() if s > start]
+    outputs = _ends(equations, start, redshift)
     span = (outputs[-1] - start) if outputs else 1.0
 
     def on_step(now: float, reached: FloatArray) -> None:
