@@ -233,7 +233,7 @@ class SlowEquations:
         rate = self._rate_of(here, state)
         if self.helium is None:
             return rate
-        return np.append(rate, self._helium_rates(log_scale, here, state).rate)
+        return np.append(rate, self._helium_rates(log_scale, state).rate)
 
     def _rate_of(self, here: Local, state: FloatArray) -> FloatArray:
         c = here.conditions
@@ -245,18 +245,21 @@ class SlowEquations:
             ]
         )
 
-    def _helium_rates(self, log_scale: float, here: Local, state: FloatArray) -> HeliumRates:
-        assert self.helium is not None
-        c, ratio = here.conditions, self.cosmology.helium_ratio()
-        around = Around(
-            c.radiation_temperature_k,
-            c.matter_temperature_k,
-            ratio * c.hydrogen_density_cm3,
-            c.hubble_rate_per_s,
-            c.electron_fraction / ratio,
-            self.background(log_scale).hubble_slope,
+    def helium_around(self, log_scale: float, state: FloatArray) -> Around:
+        """What helium sees at one time and state."""
+        around, ratio = self.background(log_scale), self.cosmology.helium_ratio()
+        return Around(
+            around.radiation_temperature_k,
+            around.radiation_temperature_k * math.exp(state[1]),
+            ratio * around.hydrogen_density_cm3,
+            around.hubble_rate_per_s,
+            self.electron_fraction(state) / ratio,
+            around.hubble_slope,
         )
-        return self.helium.rates(around, state[2:])
+
+    def _helium_rates(self, log_scale: float, state: FloatArray) -> HeliumRates:
+        assert self.helium is not None
+        return self.helium.rates(self.helium_around(log_scale, state), state[2:])
 
     def jacobian(self, log_scale: float, state: FloatArray) -> tuple[FloatArray, FloatArray]:
         """Derivatives of the rates by the state, shape (n, n), and by s, shape (n,)."""
@@ -294,7 +297,7 @@ class SlowEquations:
         if self.helium is None:
             matrix = own + np.outer(by_electrons, electrons)
             return Linearized(here, rate, matrix, drift, gradient, slopes)
-        found = self._helium_rates(log_scale, here, state)
+        found = self._helium_rates(log_scale, state)
         matrix = np.zeros((4, 4))
         matrix[:2, :2], matrix[2:, 2:] = own, found.by_own
         matrix[2:, 1] = found.by_matter

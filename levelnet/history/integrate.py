@@ -26,7 +26,7 @@ from .cost import table_tolerance
 from .course import Course
 from .equations import SlowEquations
 from .field import FieldRun, resolve_field
-from .helium import COLDEST_K, HeliumEquations
+from .helium import HeliumEquations
 from .helium_atom import HeliumAtoms, Recall, build_helium, recall_from
 from .setup import Setup
 from .start import Handover, equilibrium_state, find_handover
@@ -276,16 +276,6 @@ def _recall(setup: Setup, ladder: Ladder, pieces: Pieces | None) -> Recall | Non
     )
 
 
-def _ends(equations: SlowEquations, start: float, redshift: FloatArray) -> list[float]:
-    """Times at which steps end: outputs, and the moment when helium is held."""
-    outputs = [s for s in (-np.log1p(redshift)).tolist() if s > start]
-    if equations.helium is None or not outputs:
-        return outputs
-    today = float(equations.cosmology.radiation_temperature_k(0.0))
-    held = math.log(today / COLDEST_K)
-    return sorted({*outputs, held}) if start < held < outputs[-1] else outputs
-
-
 def integrate_slow(
     setup: Setup,
     equations: SlowEquations,
@@ -296,7 +286,7 @@ def integrate_slow(
     """Integrate from the hand-over to the last output."""
     start = -math.log1p(handover.redshift)
     state, _ = equilibrium_state(equations, start)
-    outputs = _ends(equations, start, redshift)
+    outputs = [s for s in (-np.log1p(redshift)).tolist() if s > start]
     span = (outputs[-1] - start) if outputs else 1.0
 
     def on_step(now: float, reached: FloatArray) -> None:
