@@ -38,7 +38,6 @@ from .helium import Around, HeliumEquations
 from .helium import Rates as HeliumRates
 from .local import Local
 
-
 # No variable is ever so large: fractions would leave the doubles.
 _ASTRAY = 700.0
 
@@ -191,9 +190,13 @@ class SlowEquations:
     def electron_fraction(self, state: FloatArray) -> float:
         """n_e/n_H (dimensionless) of a state."""
         ionized, _ = ionized_and_neutral(float(state[0]))
+        return ionized + self.helium_electrons(state)
+
+    def helium_electrons(self, state: FloatArray) -> float:
+        """Electrons of helium per hydrogen nucleus (dimensionless) of a state."""
         if self.helium is None:
-            return ionized
-        return ionized + self.cosmology.helium_ratio() * self.helium.fractions(state[2:]).electrons
+            return 0.0
+        return self.cosmology.helium_ratio() * self.helium.fractions(state[2:]).electrons
 
     def _blue_side(self, log_scale: float, around: Background) -> BlueSide | None:
         return None if self.past is None else self.past.blue_side(log_scale, around.hubble_slope)
@@ -226,7 +229,7 @@ class SlowEquations:
         return with_line_factors(coupling, self.lines.upper, self.escape_factor)
 
     def rate(self, log_scale: float, state: FloatArray) -> FloatArray:
-        """(du/ds, dv/ds), with helium (da/ds, db/ds) too; NaN where a trial step has gone astray."""
+        """(du/ds, dv/ds), with helium (da/ds, db/ds) too; NaN where a trial step is far off."""
         if np.abs(state).max() > _ASTRAY:
             return np.full(len(state), np.nan)
         here = self.local(log_scale, state)

@@ -2,6 +2,7 @@
 
 The interior of the atom is sampled along a reference history (Sobolev, which fixes T_m to a few
 1e-4), so that the march itself needs no network: recombination follows the true T_m by its slope.
+Helium is taken from that history: what the field does to hydrogen it feels through n_e alone.
 """
 
 from __future__ import annotations
@@ -126,7 +127,7 @@ def make_path(
     equations : SlowEquations
         Cosmology, interior, 2s-1s rate.
     reference : Trajectory
-        Its v gives the T_m to sample at.
+        Its v gives the T_m to sample at, and its helium the electrons of helium.
     start, end : float
         ln a.
     decay : bool
@@ -134,10 +135,10 @@ def make_path(
     """
     count = max(8, math.ceil((end - start) / _SPACING)) + 1
     nodes = np.linspace(start, end, count)
-    lag = CubicSpline(reference.time, reference.state[:, 1])(nodes)
+    along = CubicSpline(reference.time, reference.state)(nodes)
     lower, upper = np.triu_indices(len(equations.reduced.kept), 1)
     stored = np.array(
-        [_sample(equations, s, v, lower, upper, decay) for s, v in zip(nodes, lag, strict=True)]
+        [_sample(equations, s, y, lower, upper, decay) for s, y in zip(nodes, along, strict=True)]
     )
     series = CubicSpline(nodes, stored).c.transpose(1, 0, 2)
     kept, cosmology, lines = equations.reduced.kept, equations.cosmology, equations.lines
@@ -176,8 +177,14 @@ def _scattering_unit(einstein_a_per_s: float, energy_ev: float) -> float:
 
 
 def _sample(
-    equations: SlowEquations, time: float, lag: float, lower: IntArray, upper: IntArray, decay: bool
+    equations: SlowEquations,
+    time: float,
+    state: FloatArray,
+    lower: IntArray,
+    upper: IntArray,
+    decay: bool,
 ) -> FloatArray:
+    lag = float(state[1])
     around = equations.background(time)
     radiation_k, kept = around.radiation_temperature_k, equations.reduced.kept
     rates = equations.reduced.rates(radiation_k, radiation_k * math.exp(lag))
@@ -193,7 +200,8 @@ def _sample(
             rates.recombination_slope_matter,
             lift,
             np.log(np.maximum(down, math.exp(_NEVER))),
-            [math.log(around.hubble_rate_per_s), lag, two_photon],
+            [equations.helium_electrons(state), math.log(around.hubble_rate_per_s), lag],
+            [two_photon],
         ]
     )
 
@@ -255,7 +263,7 @@ def resolve_field(
     redshift : ndarray, shape (n_redshift,), dimensionless
         Output redshifts, descending.
     """
-    start, state = float(reference.time[0]), reference.state[0]
+    start, state = float(reference.time[0]), reference.state[0, :2]
     outputs = -np.log1p(redshift)
     outputs = outputs[outputs > start]
     end = float(outputs[-1]) if len(outputs) else start + 10.0 * _POINTS
@@ -284,7 +292,7 @@ def resolve_field(
     )
     return FieldRun(
         recorded,
-        _trajectory(marched, points),
+        _trajectory(marched, points, reference),
         _field(equations, cells, marched),
         cells.step,
         float(np.max(np.abs(there / less - 1.0))),
@@ -328,8 +336,12 @@ def _points(marched: Marched, outputs: FloatArray) -> FloatArray:
     return points
 
 
-def _trajectory(marched: Marched, points: FloatArray) -> Trajectory:
+def _trajectory(marched: Marched, points: FloatArray, reference: Trajectory) -> Trajectory:
+    """Hydrogen and T_m as marched; helium, which the field does not touch, by the reference."""
     state = CubicSpline(marched.time, marched.state)(points)
+    if reference.state.shape[1] > 2:
+        helium = CubicSpline(reference.time, reference.state[:, 2:])(points)
+        state = np.concatenate([state, helium], axis=1)
     return Trajectory(points, state, marched.outcome, 0, int(marched.track.report[1]))
 
 

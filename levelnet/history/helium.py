@@ -34,8 +34,8 @@ from .local import Local
 COLDEST_K = 1400.0
 """T_r below which helium is held as it is, in K: x_HeII is below 1e-9 and falls no further."""
 
-# Pull to Saha equilibrium in Hubble rates, and ln of x_HeIII/x_HeII between which it takes over from
-# the levels of He II, which would only ask for short steps.
+# Pull to Saha equilibrium in Hubble rates, and ln of x_HeIII/x_HeII between which it takes over
+# from the levels of He II, which would only ask for short steps.
 _PULL, _GONE, _FADING = 1e9, -50.0, -40.0
 # From so far above COLDEST_K, in ln T_r, rates fade to nothing.
 _EBB = 0.05

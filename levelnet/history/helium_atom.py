@@ -15,8 +15,13 @@ from ..atomic.helium_lines import HeliumLines
 from ..atomic.two_photon import two_photon_rate
 from ..errors import InputError
 from ..escape.treatment import LineTreatment, ResonanceLines, Sobolev
-from ..network.helium import HeliumLadders, HeliumReduction, KeptTerms, helium_ladders
-from ..network.helium import tabulate_helium
+from ..network.helium import (
+    HeliumLadders,
+    HeliumReduction,
+    KeptTerms,
+    helium_ladders,
+    tabulate_helium,
+)
 from ..network.ladder import Ladder, hydrogen_ladder
 from ..network.reduced import KeptLevels
 from ..network.tabulation import TabulatedReduction, tabulate
@@ -92,9 +97,7 @@ def kept_terms(setup: Setup) -> KeptTerms:
     return (*_LOWEST, *((n, 1, 0) for n in range(3, top + 1)))
 
 
-def build_helium(
-    setup: Setup, hottest_k: float, tell: Tell, pieces: Pieces | None
-) -> HeliumAtoms:
+def build_helium(setup: Setup, hottest_k: float, tell: Tell, pieces: Pieces | None) -> HeliumAtoms:
     """Helium of a setup, reduced from COLDEST_K up to `hottest_k`.
 
     Parameters
@@ -154,7 +157,9 @@ def lines_to_ground(setup: Setup, ladders: HeliumLadders) -> ResonanceLines:
         if level in place and found.rate_per_s[i] > 0.0
     ]
     level = found.level[chosen]
-    names = [_LEVEL_NAMES.get(found.kind[i], ladders.levels.name(int(found.level[i]))) for i in chosen]
+    names = [
+        _LEVEL_NAMES.get(found.kind[i], ladders.levels.name(int(found.level[i]))) for i in chosen
+    ]
     effective = found.rate_per_s[chosen] * found.share[chosen]
     return ResonanceLines(
         tuple(f"{name}-1 1S" for name in names),
@@ -184,9 +189,7 @@ def _line_of_second(ion: Ladder) -> ResonanceLines:
     upper = np.array([1])
     weight = ion.kept.statistical_weight[upper] / ion.kept.ground_weight
     energy_ev = ion.kept.energy_ev[upper]
-    return ResonanceLines(
-        ("2p-1s",), upper, np.array([rate]), energy_ev, weight, np.array([rate])
-    )
+    return ResonanceLines(("2p-1s",), upper, np.array([rate]), energy_ev, weight, np.array([rate]))
 
 
 def _table_of_first(

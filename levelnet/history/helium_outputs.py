@@ -19,7 +19,7 @@ from .helium_record import HeliumFigures
 from .integrate import Integrated
 from .local import Local
 from .outcome import relaxation_hubble
-from .result import SpeciesPopulations
+from .result import Levels, SpeciesPopulations
 
 _SMALLEST_LOG = math.log(1e-300)
 # Levels of helium count for the outcome while so much of it is ionized.
@@ -106,7 +106,7 @@ def helium_species(
     moments : list of HeliumMoment
         Helium at every output.
     """
-    named = [("He I", atoms.first.levels)]
+    named: list[tuple[str, Levels]] = [("He I", atoms.first.levels)]
     if atoms.second is not None:
         named.append((atoms.second.species, atoms.second.levels))
     made = []

@@ -29,7 +29,7 @@ from .field import FieldRun, resolve_field
 from .helium import HeliumEquations
 from .helium_atom import HeliumAtoms, Recall, build_helium, recall_from
 from .setup import Setup
-from .start import Handover, equilibrium_state, find_handover
+from .start import Handover, equilibrium_state, find_handover, hydrogen_handover
 
 Progress = Callable[[str, float], None]
 
@@ -101,49 +101,56 @@ def integrate_history(
         hottest_k = float(setup.cosmology.radiation_temperature_k(float(redshift[0])))
         atoms = build_helium(setup, hottest_k, tell, pieces)
     helium = None if atoms is None else atoms.equations
-    handover = setup_handover(setup, chosen, helium)
+    scout = _scout(setup, chosen, helium)
+    handover = handover_of(setup, scout)
     resolved = isinstance(chosen, ResolvedField)
+    begin = handover_of_field(setup, scout) if resolved else handover
     if start_above > handover.redshift and not resolved:
-        handover = Handover(start_above, handover.departure)
+        handover = replace(handover, redshift=start_above)
     ladder = build_ladder(setup, keeps=(*chosen.keeps, *setup.lines.field_levels, *keeps))
     factor = scales(setup.physics)
     reduced: Reduced = live_reduction(ladder)
     if setup.accuracy.interpolate:
         low, high = redshift[-1], max(redshift[0], handover.redshift, start_above)
         if resolved:
-            low = _later(_march_redshifts(handover, redshift)[-1], _BEYOND)
+            low = _later(_march_redshifts(begin, redshift)[-1], _BEYOND)
         span = min(low, handover.redshift), high
         reduced = _table(setup, ladder, span, tell, pieces)
     equations = slow_equations(setup, with_scales(reduced, factor), chosen, helium)
     if resolved:
-        run = march_field(setup, equations, handover, redshift, tell)
-        return Integrated(run.equations, handover, run.trajectory, ladder, redshift, reduced, run)
+        run = march_field(setup, equations, (handover, begin), redshift, tell)
+        found = run.equations, handover, run.trajectory, ladder, redshift, reduced, run
+        return Integrated(*found, helium=atoms)
     trajectory = integrate_slow(setup, equations, handover, redshift, tell)
     return Integrated(equations, handover, trajectory, ladder, redshift, reduced, helium=atoms)
 
 
-def setup_handover(
-    setup: Setup, chosen: LineTreatment | None = None, helium: HeliumEquations | None = None
-) -> Handover:
-    """Where a run starts: found with a small atom, since only the lowest levels matter there."""
+def setup_handover(setup: Setup, chosen: LineTreatment | None = None) -> Handover:
+    """Where a run of hydrogen starts."""
+    return handover_of(setup, _scout(setup, chosen, None))
+
+
+def _scout(
+    setup: Setup, chosen: LineTreatment | None, helium: HeliumEquations | None
+) -> SlowEquations:
+    """Equations with a small atom, to find hand-overs: only the lowest levels matter there."""
     keeps = () if chosen is None else chosen.keeps
     scout = build_ladder(setup, min(setup.hydrogen.n_max, _SCOUT_N), keeps)
     reduced = with_scales(live_reduction(scout), scales(setup.physics))
-    return handover_of(setup, slow_equations(setup, reduced, chosen, helium))
+    return slow_equations(setup, reduced, chosen, helium)
 
 
 def handover_of(setup: Setup, equations: SlowEquations) -> Handover:
     """Where a run with these equations starts."""
-    lag = 0.1 * setup.accuracy.relative
-    if isinstance(equations.treatment, ResolvedField):
-        lag = max(lag, _FIELD_LAG)
-    return find_handover(equations, lag)
+    if isinstance(equations.treatment, ResolvedField) and equations.helium is None:
+        return handover_of_field(setup, equations)
+    return find_handover(equations, 0.1 * setup.accuracy.relative)
 
 
 def march_field(
     setup: Setup,
     equations: SlowEquations,
-    handover: Handover,
+    handovers: tuple[Handover, Handover],
     redshift: FloatArray,
     tell: Progress,
 ) -> FieldRun:
@@ -151,8 +158,9 @@ def march_field(
 
     Parameters
     ----------
-    setup, equations, handover
-        The run, its equations while the field is a blackbody, and where it starts.
+    setup, equations, handovers
+        The run, its equations while the field is a blackbody, where it starts, and where the field
+        begins: there too, but with helium later.
     redshift : ndarray, shape (n_redshift,), dimensionless
         Output redshifts, descending.
     tell : callable
@@ -163,16 +171,32 @@ def march_field(
     SolveError
         If the integration without the field, or the march, cannot be done.
     """
-    accuracy = replace(setup.accuracy, relative=max(setup.accuracy.relative, _REFERENCE))
-    rough = replace(setup, accuracy=accuracy)
-    redshift = _march_redshifts(handover, redshift)
-    reference = integrate_slow(rough, equations, handover, redshift, lambda *_: None)
+    (handover, begin), rough = handovers, setup
+    if equations.helium is None:
+        accuracy = replace(setup.accuracy, relative=max(setup.accuracy.relative, _REFERENCE))
+        rough = replace(setup, accuracy=accuracy)
+    redshift = _march_redshifts(begin, redshift)
+    ends = np.union1d(redshift, [begin.redshift])[::-1]
+    reference = integrate_slow(rough, equations, handover, ends, lambda *_: None)
     if not reference.outcome.ok:
         raise SolveError(reference.outcome.value, outcome=reference.outcome)
     tell("radiation field", 0.0)
-    run = resolve_field(setup, equations, reference, redshift)
+    first = int(np.argmin(np.abs(reference.time + math.log1p(begin.redshift))))
+    later = replace(reference, time=reference.time[first:], state=reference.state[first:])
+    run = resolve_field(setup, equations, later, redshift)
     tell("radiation field", 1.0)
-    return run
+    before = reference.time[:first], reference.state[:first]
+    whole = replace(
+        run.trajectory,
+        time=np.concatenate([before[0], run.trajectory.time]),
+        state=np.concatenate([before[1], run.trajectory.state]),
+    )
+    return run._replace(trajectory=whole)
+
+
+def handover_of_field(setup: Setup, equations: SlowEquations) -> Handover:
+    """Where a resolved field begins; helium has recombined in part by then."""
+    return hydrogen_handover(equations, max(0.1 * setup.accuracy.relative, _FIELD_LAG))
 
 
 def _march_redshifts(handover: Handover, redshift: FloatArray) -> FloatArray:

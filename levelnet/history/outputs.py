@@ -76,8 +76,8 @@ def assemble_history(setup: Setup, integrated: Integrated, tell: Progress) -> Hi
         raise SolveError(trajectory.outcome.value, outcome=trajectory.outcome)
     outputs = _outputs(integrated, redshift, tell)
     moments = helium_moments(integrated, redshift)
-    every = [one.relaxation_hubble for one in (*outputs, *moments)]
-    slowest = min(every, default=math.inf)
+    every = [one.relaxation_hubble for one in outputs]
+    slowest = min([*every, *(one.relaxation_hubble for one in moments)], default=math.inf)
     outcome = outcome_of(setup, integrated, [slowest])
     conditions = [o.local.conditions for o in outputs]
     electron_fraction = np.array([c.electron_fraction for c in conditions])
@@ -107,7 +107,9 @@ def assemble_history(setup: Setup, integrated: Integrated, tell: Progress) -> Hi
         electron_fraction,
         ionized,
         ground,
-        *helium,
+        helium[0],
+        helium[1],
+        helium[2],
         np.array([c.matter_temperature_k for c in conditions]),
         np.array([c.radiation_temperature_k for c in conditions]),
         hydrogen_cm3,

@@ -144,7 +144,7 @@ def find_handover(equations: SlowEquations, tolerance: float) -> Handover:
         of).
     """
     if equations.helium is None:
-        return _hydrogen_handover(equations, tolerance)
+        return hydrogen_handover(equations, tolerance)
 
     def excess(log_growth: float) -> float:
         lag = ion_lags(equations, -log_growth)
@@ -164,7 +164,9 @@ def find_handover(equations: SlowEquations, tolerance: float) -> Handover:
     return _handover(equations, redshift)
 
 
-def _hydrogen_handover(equations: SlowEquations, tolerance: float) -> Handover:
+def hydrogen_handover(equations: SlowEquations, tolerance: float) -> Handover:
+    """Lowest redshift where the lag of hydrogen is within `tolerance`, whatever helium does."""
+
     def excess(log_growth: float) -> float:
         lag = abs(equilibrium_state(equations, -log_growth)[1])
         return math.log(lag / tolerance)

@@ -178,12 +178,11 @@ class SpinInterior(NamedTuple):
 
     def populations(self, fed: FloatArray) -> FloatArray:
         """Populations, shape (n_unknowns,), of levels fed at these rates: (D - R)^T x = `fed`."""
-        return self.weight * self.fates((fed / self.weight)[None, :])[0]
+        found: FloatArray = self.weight * self.fates((fed / self.weight)[None, :])[0]
+        return found
 
 
-def factor_spin(
-    ladders: HeliumLadders, spin: int, kt_ev: float, sink: FloatArray
-) -> SpinInterior:
+def factor_spin(ladders: HeliumLadders, spin: int, kt_ev: float, sink: FloatArray) -> SpinInterior:
     """Factor the eliminated levels of one spin, which leave it at the rates `sink` in s^-1."""
     inside = ladders.interior[spin]
     where, levels, shape = inside.position, ladders.levels, inside.shape

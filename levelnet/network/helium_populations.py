@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 
 from .. import constants as const
-from ..arrays import FloatArray
+from ..arrays import FloatArray, IntArray
 from ..atomic.detailed_balance import log_saha_factor, thermal_volume_cm3
 from ..atomic.helium_bound_free import ION_WEIGHT, captured_spectrum
 from ..background.conditions import Conditions
@@ -73,7 +73,7 @@ def _recombination(ladders: HeliumLadders, conditions: Conditions) -> FloatArray
     return rates
 
 
-def _leaving(here: Reduction, position: FloatArray) -> FloatArray:
+def _leaving(here: Reduction, position: IntArray) -> FloatArray:
     """Rate at which eliminated levels leave the interior, s^-1."""
     rates: FloatArray = here.photoionization_per_s[position] + here.to_kept[:, position].sum(axis=0)
     return rates

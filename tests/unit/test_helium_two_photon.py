@@ -14,6 +14,7 @@ from levelnet.atomic.helium_two_photon import (
     helium_two_photon_slope,
     transition_energy_ev,
 )
+from levelnet.atomic.species import TWO_PHOTON_PER_S
 from levelnet.errors import RangeError
 from levelnet.tables import read_table
 
