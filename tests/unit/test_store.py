@@ -85,7 +85,7 @@ def stored(history: History, tmp_path_factory: pytest.TempPathFactory) -> Path:
 
 def test_comes_back_to_the_bit(history: History, stored: Path) -> None:
     before, after = dict(leaves(history)), dict(leaves(read(stored)))
-    assert len(before) == 67
+    assert len(before) == 68
     assert {path: bits(value) for path, value in after.items()} == {
         path: bits(value) for path, value in before.items()
     }
