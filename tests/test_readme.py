@@ -13,8 +13,9 @@ import numpy as np
 import pytest
 
 import levelnet
+from levelnet.atomic.species import Helium
 from levelnet.cli.main import build_parser
-from levelnet.escape.lines import Transfer
+from levelnet.escape.lines import HeliumContinuum, Transfer
 from levelnet.history.setup import Setup, parse_setup
 from levelnet.store import (
     DISTILLED_LAYOUT,
@@ -23,7 +24,7 @@ from levelnet.store import (
     TABLE_LAYOUT,
     WEIGHING_LAYOUT,
 )
-from levelnet.store.layout import groups_of
+from levelnet.store.layout import SPECIES_GROUPS, groups_of
 
 ROOT = Path(__file__).resolve().parents[1]
 README = (ROOT / "README.md").read_text(encoding="utf-8")
@@ -65,7 +66,7 @@ def test_every_command_has_a_row_and_no_other() -> None:
 
 
 KINDS = {
-    "levelnet history": groups_of(("H I",), with_field=True),  # helium has no levels yet
+    "levelnet history": groups_of(tuple(SPECIES_GROUPS), with_field=True, with_helium=True),
     **{
         kind.name: (*kind.required, *kind.optional)
         for kind in (LEVEL_LAYOUT, ESCAPE_LAYOUT, WEIGHING_LAYOUT, TABLE_LAYOUT, DISTILLED_LAYOUT)
@@ -101,6 +102,10 @@ def test_every_key_of_the_setup_is_explained(part: str, field: dataclasses.Field
     elif field.name == "helium_mass_fraction":
         # None stands for a value that depends on another key.
         assert cells[1] == "`0.245`"
+    elif part == "helium" and field.default is None:
+        # None stands for a value wherever helium has levels.
+        value = tomllib.loads(f"x = {cells[1].strip('`')}")["x"]
+        assert value == getattr(Helium(n_max=2), field.name)
     elif (part, field.name) == ("lines", "two_photon"):
         assert cells[1] == '`"spontaneous"`'
     elif field.default is None:
@@ -110,10 +115,22 @@ def test_every_key_of_the_setup_is_explained(part: str, field: dataclasses.Field
         assert (tuple(value) if isinstance(value, list) else value) == field.default
 
 
-@pytest.mark.parametrize("field", dataclasses.fields(Transfer), ids=lambda field: field.name)
-def test_every_key_of_the_transfer_table_is_explained(field: dataclasses.Field) -> None:
-    rows = rows_of("lines.transfer")
-    assert set(rows) == {one.name for one in dataclasses.fields(Transfer)}
+@pytest.mark.parametrize(
+    ("part", "record", "field"),
+    [
+        (part, record, field)
+        for part, record in (
+            ("lines.transfer", Transfer),
+            ("lines.helium_continuum", HeliumContinuum),
+        )
+        for field in dataclasses.fields(record)
+    ],
+)
+def test_every_key_of_a_table_of_lines_is_explained(
+    part: str, record: type, field: dataclasses.Field
+) -> None:
+    rows = rows_of(part)
+    assert set(rows) == {one.name for one in dataclasses.fields(record)}
     found = rows[field.name][1]
     if field.default is None:
         assert found == "not set"

@@ -10,9 +10,7 @@ from ..arrays import FloatArray, IntArray, frozen_array
 from ..errors import InputError
 from ..tables import read_table
 from .helium_levels import PER_CM_EV, HeliumLevels, term_numbers
-
-INTERCOMBINATION_PER_S = 177.6
-"""Default rate of 2 3P1 -> 1 1S (Lach & Pachucki 2001, Phys. Rev. A 64, 042510; from memory)."""
+from .species import INTERCOMBINATION_PER_S
 
 GROUND = "1 1S"
 

@@ -12,9 +12,6 @@ from ..tables import read_table
 from .helium_levels import helium_levels
 from .two_photon import stimulated_two_photon_factor, stimulated_two_photon_slope
 
-TWO_PHOTON_PER_S = 51.02
-"""Default total rate of 2 1S -> 1 1S (Derevianko & Johnson 1997, Phys. Rev. A 56, 1288)."""
-
 # Continuum states between 2 1S and infinity stand as one pole, at this fraction of the energy of
 # the transition above 2 1S. Chosen once: of 0.6 and 3, the one that meets the table to rounding.
 _CONTINUUM_POLE = 0.6

@@ -1,10 +1,21 @@
 """The parts of a setup that choose the atoms: how many levels, which energies, which rates."""
 
-from typing import Annotated, Literal
+from typing import Annotated, Any, Literal
 
-from pydantic import Field
+from pydantic import AfterValidator, BeforeValidator, Field, ValidationInfo
 
 from ..records import checked_record
+
+HELIUM_N_MAX = 100
+"""Highest n of helium up to which its levels and rates are tested."""
+# s^-1; sources in :class:`Helium`.
+INTERCOMBINATION_PER_S, TWO_PHOTON_PER_S = 177.6, 51.02
+
+
+def _helium_size(value: int) -> int:
+    if value == 0 or 2 <= value <= HELIUM_N_MAX:
+        return value
+    raise ValueError(f"allowed: 0 (inert) or 2 to {HELIUM_N_MAX}")
 
 
 @checked_record
@@ -51,11 +62,61 @@ class Hydrogen:
         return self.n_max if self.resolve_l_to is None else self.resolve_l_to
 
 
+def _where_it_acts(default: float | str) -> BeforeValidator:
+    """Default of a choice about helium's levels: not set where there are none."""
+
+    def fill(value: object, info: ValidationInfo) -> object:
+        if value is None and info.data.get("n_max"):
+            return default
+        return value
+
+    return BeforeValidator(fill)
+
+
+_BY_SIZE: Any = None  # stands for a default that depends on `n_max`
+
+
 @checked_record
 class Helium:
-    """How helium is built: for now neutral and inert (``n_max = 0``).
+    """How helium is built.
 
-    Inert helium only weighs: in n_H, in the helium-to-hydrogen ratio and in the heat capacity.
+    With ``n_max = 0`` it is neutral and inert: it only weighs, in n_H, in the helium-to-hydrogen
+    ratio and in the heat capacity, and the other keys may not be set.
+
+    Parameters
+    ----------
+    n_max : int, 0 or 2 to 100 (dimensionless)
+        Highest principal quantum number of He I, singlets and triplets with every l, and of He II.
+    intercombination_rate_per_s : float, s^-1, not negative
+        Rate of 2 3P1 -> 1 1S; 0 switches the line off. The default 177.6 (Lach & Pachucki 2001;
+        from memory) stands beside older values from 176.4 to 233.
+    two_photon_rate_per_s : float, s^-1, not negative
+        Total two-photon decay rate of 2 1S; 0 switches the channel off. The default is 51.02
+        (Derevianko & Johnson 1997).
+    helium_ion : "network" or "saha"
+        Recombination of He III: by the levels of He II, or in Saha equilibrium at T_m, which is up
+        to 1e-3 of x_e lower near redshift 6000.
     """
 
-    n_max: Annotated[int, Field(ge=0, le=0)] = 0
+    n_max: Annotated[int, AfterValidator(_helium_size)] = 0
+    intercombination_rate_per_s: Annotated[
+        Annotated[float, Field(ge=0.0, le=1e6)] | None,
+        _where_it_acts(INTERCOMBINATION_PER_S),
+        Field(validate_default=True),
+    ] = _BY_SIZE
+    two_photon_rate_per_s: Annotated[
+        Annotated[float, Field(ge=0.0, le=1e6)] | None,
+        _where_it_acts(TWO_PHOTON_PER_S),
+        Field(validate_default=True),
+    ] = _BY_SIZE
+    helium_ion: Annotated[
+        Literal["saha", "network"] | None,
+        _where_it_acts("network"),
+        Field(validate_default=True),
+    ] = _BY_SIZE
+
+    def __post_init__(self) -> None:
+        """Refuse choices about levels that are not there."""
+        for name in ("intercombination_rate_per_s", "two_photon_rate_per_s", "helium_ion"):
+            if self.n_max == 0 and getattr(self, name) is not None:
+                raise ValueError(f"{name}: helium is inert with n_max = 0; allowed from n_max = 2")

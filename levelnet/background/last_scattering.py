@@ -10,11 +10,11 @@ c_s = c/sqrt(3 (1 + R)), eta conformal time, and z_end the lowest redshift of th
     1/k_D^2  = int_0^{eta_*} d eta [R^2/(1 + R) + 16/15]/[6 (1 + R) a n_e sigma_T]
     t(z)     = int_{z}^{infinity} dz/(H (1 + z))                     at z_*
 
-There is no reionization in any of them. Above the first point x_e counts as 1: only k_D sees it, by
-a relative error below half the neutral fraction there (1.4e-10 at T_r = 9000 K, 1.4e-8 at 7000 K,
-5e-7 at 6000 K, in Saha equilibrium). Helium's electrons are not in x_e: before z = 1800 they
-would raise k_D by about 0.5 per cent. Tight coupling, on which k_D rests, is taken to hold up to
-z_*, as in the references, although it ceases there.
+There is no reionization in any of them. Above the first point x_e counts as 1, or, with helium, as
+1 + 2 f_He: only k_D sees it, by a relative error below half the neutral fraction there (1.4e-10 at
+T_r = 9000 K, 1.4e-8 at 7000 K, 5e-7 at 6000 K, in Saha equilibrium). Where helium is inert x_e
+misses its electrons: before z = 1800 they raise k_D by about 0.5 per cent. Tight coupling, on which
+k_D rests, is taken to hold up to z_*, as in the references, although it ceases there.
 
 Every observable is a functional of ln(sigma_T n_e), ln H and ln R; its change is kept as weights on
 these three at the points of the quadrature, from which all derivatives follow.
@@ -48,6 +48,8 @@ from .scattering import DAMPING, DEPTH, SOUND, TIME, Event, Found, Scattering
 
 # T_r from which integrals over a history may start: 1.4e-8 of hydrogen is neutral there.
 _IONIZED_K = 7000.0
+# The same with helium: 1e-5 of it is not ionized twice.
+_HELIUM_IONIZED_K = 24_000.0
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -62,7 +64,7 @@ class Observed:
         Values in these units.
     gradient : ndarray, shape (n_observables, n_points)
         By ln x_e at each point of the quadrature, in these units: a weight vector, so that the
-        observable changes by gradient @ (d ln x_e). x_e above the first point is held at 1.
+        observable changes by gradient @ (d ln x_e). x_e above the first point is held.
     by_parameter : ndarray, shape (n_observables, n_parameters)
         By each of `COSMOLOGICAL`, per unit of each, at fixed x_e(s).
     by_thomson : ndarray, shape (n_observables,)
@@ -85,9 +87,13 @@ class Observed:
         frozen_array(self, "by_thomson", (n,))
 
 
-def ionized_redshift(cosmology: Cosmology) -> float:
-    """Redshift (dimensionless) above which hydrogen is ionized to 1e-8: integrals start there."""
-    return _IONIZED_K / cosmology.cmb_temperature_k - 1.0
+def ionized_redshift(cosmology: Cosmology, helium: bool = False) -> float:
+    """Redshift (dimensionless) from which integrals start.
+
+    Above it hydrogen is ionized to 1e-8, and, with `helium`, that to 1e-5 and twice.
+    """
+    hot_k = _HELIUM_IONIZED_K if helium else _IONIZED_K
+    return hot_k / cosmology.cmb_temperature_k - 1.0
 
 
 def observe(
@@ -97,6 +103,7 @@ def observe(
     thomson: float = 1.0,
     optical_depth_to: Sequence[float] = (),
     names: Sequence[str] = tuple(OBSERVABLES),
+    early_electron_fraction: float = 1.0,
 ) -> Observed:
     """Observables of a history, with derivatives by x_e at every point.
 
@@ -115,6 +122,8 @@ def observe(
         Redshifts Z for optical_depth(Z), from z_end up to Z; NaN outside the grid.
     names : sequence of str
         Which of :data:`levelnet.quantities.OBSERVABLES`.
+    early_electron_fraction : float, dimensionless
+        n_e/n_H before the grid: 1 + 2 f_He where the history has helium.
 
     Raises
     ------
@@ -128,7 +137,7 @@ def observe(
     ionized = np.asarray(electron_fraction, dtype=float)
     if ionized.shape != grid.points.shape or not np.all((ionized > 0.0) & np.isfinite(ionized)):
         raise InputError(f"electron_fraction: {len(grid.points)} positive numbers are needed")
-    seen = Scattering(cosmology, grid, ionized, thomson)
+    seen = Scattering(cosmology, grid, ionized, thomson, early_electron_fraction)
     found = [_MAKERS[name](seen) for name in names]
     found += [_optical_depth(seen, z) for z in optical_depth_to]
     nothing = math.nan, np.full((3, len(seen.s)), math.nan)

@@ -37,10 +37,18 @@ class Event(NamedTuple):
 
 
 class Scattering:
-    """All integrands at the n times from a = 0 to the end, and the events among them."""
+    """All integrands at the n times from a = 0 to the end, and the events among them.
+
+    Before the grid n_e/n_H is `early`.
+    """
 
     def __init__(
-        self, cosmology: Cosmology, grid: Quadrature, ionized: FloatArray, thomson: float
+        self,
+        cosmology: Cosmology,
+        grid: Quadrature,
+        ionized: FloatArray,
+        thomson: float,
+        early: float = 1.0,
     ) -> None:
         early_s, self.early_weights = early_quadrature(cosmology, float(grid.edges[0]))
         self.cosmology, self.grid, self.n_early = cosmology, grid, len(early_s)
@@ -48,6 +56,7 @@ class Scattering:
         self.last_fraction = float(ionized[-1])
         growth = np.exp(-self.s)
         electrons_cm3 = cosmology.hydrogen_density_cm3(0.0) * growth**3
+        electrons_cm3[: self.n_early] *= early
         electrons_cm3[self.n_early :] *= ionized
         per_mpc = opacity_per_mpc(electrons_cm3, growth, thomson)
         # d eta = c ds/(a H).

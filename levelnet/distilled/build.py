@@ -96,6 +96,7 @@ def distill(  # noqa: PLR0913  choices by name, each with a default
     SolveError
         If the tolerance is out of reach, or a worker process dies again and again on one input.
     """
+    setup.require_inert_helium("a distilled table")
     choice = choose_kept(setup, kept)
     ranges = _ranges(radiation_range_k, ratio_range)
     if not TIGHTEST <= tolerance <= LOOSEST:

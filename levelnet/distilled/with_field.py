@@ -83,7 +83,9 @@ def history_with_field(
     changes = setup.physics.fine_structure_change, setup.physics.electron_mass_change
     equations = slow_equations(setup, table.with_constants(*changes))
     handover = handover_of(setup, equations)
-    run = march_field(setup, equations, handover, redshift, lambda stage, fraction: None)
+    run = march_field(
+        setup, equations, (handover, handover), redshift, lambda stage, fraction: None
+    )
     outcome = run.trajectory.outcome
     if not outcome.ok:
         raise SolveError(outcome.value, outcome=outcome)

@@ -10,10 +10,11 @@ import numpy as np
 from .. import constants as const
 from ..arrays import FloatArray, IntArray, frozen_array
 from ..atomic.bound_free import photoionization_cross_section
-from ..atomic.helium_ground import INTERCOMBINATION_PER_S, GroundLines, ground_lines
+from ..atomic.helium_ground import GroundLines, ground_lines
 from ..atomic.helium_levels import HeliumLevels
 from ..atomic.helium_widths import OtherDecays, other_decays
 from ..atomic.levels import reduced_mass_ratio
+from ..atomic.species import INTERCOMBINATION_PER_S
 from ..errors import InputError
 from ..network.helium import HeliumLadders, KeptTerms
 from .treatment import ResonanceLines

@@ -50,6 +50,29 @@ class Transfer:
     highest_two_photon_n: Annotated[int, Field(ge=3, le=TWO_PHOTON_N_MAX)] = 4
 
 
+@checked_record
+class HeliumContinuum:
+    """How the lines of He I to its ground state fare among absorbing hydrogen atoms.
+
+    Parameters
+    ----------
+    redistribution : "doppler", "complete" or "partial"
+        Frequency of a scattered photon: within the Doppler core; over the whole profile; over the
+        core and, by the incoherent part, the wings.
+    feedback : bool
+        Photons that leave a line travel down to the next line below.
+    """
+
+    redistribution: Literal["doppler", "complete", "partial"] = "partial"
+    feedback: bool = True
+
+
+def _continuum_default(value: object, info: ValidationInfo) -> object:
+    if value is None and info.data.get("helium") == "continuum":
+        return HeliumContinuum()
+    return value
+
+
 def _two_photon_default(value: object, info: ValidationInfo) -> object:
     if value is not None:
         return value
@@ -86,6 +109,15 @@ class Lines:
         next line below, so isolated high lines add escape without end.
     transfer : Transfer, optional
         What the field takes part in; only with ``hydrogen = "transfer"``.
+    helium : "sobolev", "sobolev_feedback" or "continuum", optional
+        Treatment of the lines of He I to its ground state, where helium has levels: Sobolev, with
+        feedback from line to line, or with absorption by hydrogen inside the lines. Not set:
+        Sobolev.
+    helium_higher_lines : "closed", "free" or "feedback", optional
+        Lines n 1P -> 1 1S with n >= 3: left out; each on its own, which adds escape with every n
+        and never converges; or each lit by the next line above. Not set: closed.
+    helium_continuum : HeliumContinuum, optional
+        Details of ``helium = "continuum"``, and only with it.
     """
 
     hydrogen: Literal["closed", "open", "sobolev", "sobolev_feedback", "transfer"] = "sobolev"
@@ -101,9 +133,19 @@ class Lines:
         BeforeValidator(_transfer_default),
         Field(validate_default=True),
     ] = None
+    helium: Literal["sobolev", "sobolev_feedback", "continuum"] | None = None
+    helium_higher_lines: Literal["closed", "free", "feedback"] | None = None
+    helium_continuum: Annotated[
+        HeliumContinuum | None,
+        from_mapping(HeliumContinuum),
+        BeforeValidator(_continuum_default),
+        Field(validate_default=True),
+    ] = None
 
     def __post_init__(self) -> None:
         """Check the rules about several fields."""
+        if self.helium_continuum is not None and self.helium != "continuum":
+            raise ValueError('helium_continuum: only with helium = "continuum"')
         if self.hydrogen == "transfer":
             return
         if self.two_photon == "distorted":

@@ -124,10 +124,12 @@ class _Isolated:
         chance, slope = self.escape(depth)
         rate = lines.einstein_a_per_s * chance / emptiness
         loss, by_column, by_temperature = np.zeros((3, len(kept)))
-        loss[lines.upper] = rate
-        by_column[lines.upper] = rate * slope
+        # Two lines may share their upper level, so that each must be added.
+        np.add.at(loss, lines.upper, rate)
+        np.add.at(by_column, lines.upper, rate * slope)
         # d ln(1+f) / d ln T = x f; f underflows long before x f matters.
-        by_temperature[lines.upper] = rate * exponent * np.exp(-exponent) / emptiness
+        heat = rate * exponent * np.exp(-exponent) / emptiness
+        np.add.at(by_temperature, lines.upper, heat)
         boltzmann = np.exp(
             log_boltzmann_populations(
                 kept, conditions.radiation_temperature_k, conditions.ground_fraction

@@ -10,7 +10,7 @@ from scipy.interpolate import CubicSpline
 
 from ..arrays import FloatArray
 from ..numerics.stepping import Trajectory
-from .equations import SlowEquations, ionized_and_neutral
+from .equations import SlowEquations
 from .start import Handover, equilibrium_state
 
 _SAME = 1e-9  # two times in ln a that differ by rounding alone
@@ -49,11 +49,14 @@ def state_at(course: Course, log_scale: float) -> FloatArray:
 
 def electron_fraction_at(course: Course, log_scale: FloatArray) -> FloatArray:
     """n_e/n_H (dimensionless) at any ln a of the history."""
-    log_odds = np.empty(len(log_scale))
+    equations, trajectory = course.equations, course.trajectory
+    # Without helium v has no part in n_e.
+    variables = 1 if equations.helium is None else trajectory.state.shape[1]
+    state = np.empty((len(log_scale), variables))
     below = log_scale > -math.log1p(course.handover.redshift)
-    trajectory = course.trajectory
     if below.any():
-        log_odds[below] = CubicSpline(trajectory.time, trajectory.state[:, 0])(log_scale[below])
+        spline = CubicSpline(trajectory.time, trajectory.state[:, :variables])
+        state[below] = spline(log_scale[below])
     for k in np.flatnonzero(~below):
-        log_odds[k] = equilibrium_state(course.equations, log_scale[k])[0][0]
-    return np.array([ionized_and_neutral(u)[0] for u in log_odds.tolist()])
+        state[k] = equilibrium_state(equations, log_scale[k])[0][:variables]
+    return np.array([equations.electron_fraction(one) for one in state])

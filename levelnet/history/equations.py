@@ -39,6 +39,9 @@ from .helium import Around, HeliumEquations
 from .helium import Rates as HeliumRates
 from .local import Local
 
+# No variable is ever so large: fractions would leave the doubles.
+_ASTRAY = 700.0
+
 
 class Background(NamedTuple):
     """What the cosmology says at one time.
@@ -124,6 +127,10 @@ class SlowEquations:
         What the run remembers of the lines' red sides, where the treatment sees blue sides.
     helium : HeliumEquations or None
         Where helium recombines too; None: it is neutral and inert.
+
+    Notes
+    -----
+    The state is (u, v), with helium (u, v, a, b).
     """
 
     cosmology: Cosmology
@@ -184,12 +191,22 @@ class SlowEquations:
     def electron_fraction(self, state: FloatArray) -> float:
         """n_e/n_H (dimensionless) of a state."""
         ionized, _ = ionized_and_neutral(float(state[0]))
+        return ionized + self.helium_electrons(state)
+
+    def helium_electrons(self, state: FloatArray) -> float:
+        """Electrons of helium per hydrogen nucleus (dimensionless) of a state."""
         if self.helium is None:
-            return ionized
-        return ionized + self.cosmology.helium_ratio() * self.helium.fractions(state[2:]).electrons
+            return 0.0
+        return self.cosmology.helium_ratio() * self.helium.fractions(state[2:]).electrons
 
     def _blue_side(self, log_scale: float, around: Background) -> BlueSide | None:
         return None if self.past is None else self.past.blue_side(log_scale, around.hubble_slope)
+
+    @property
+    def longest_step(self) -> float:
+        """No step in ln a may be longer, or its end would need what lies inside it."""
+        pasts = self.past, None if self.helium is None else self.helium.past
+        return min((one.longest_step for one in pasts if one is not None), default=math.inf)
 
     def remember(self, log_scale: float, state: FloatArray) -> None:
         """Keep what an accepted step sends to the lines below, if the treatment asks for it."""
@@ -227,7 +244,9 @@ class SlowEquations:
         return with_line_factors(coupling, self.lines.upper, self.escape_factor)
 
     def rate(self, log_scale: float, state: FloatArray) -> FloatArray:
-        """(du/ds, dv/ds), with helium (da/ds, db/ds) too."""
+        """(du/ds, dv/ds), with helium (da/ds, db/ds) too; NaN where a trial step is far off."""
+        if np.abs(state).max() > _ASTRAY:
+            return np.full(len(state), np.nan)
         here = self.local(log_scale, state)
         rate = self._rate_of(here, state)
         if self.helium is None:

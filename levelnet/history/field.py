@@ -1,6 +1,7 @@
 """A run whose radiation field is resolved in frequency: one march of field, levels and ionization.
 
-The march itself needs no network (`history/march_path.py`).
+The march itself needs no network (`history/march_path.py`). Helium is taken from the reference
+history: what the field does to hydrogen it feels through n_e alone.
 """
 
 from __future__ import annotations
@@ -169,7 +170,7 @@ def resolve_field(
     redshift : ndarray, shape (n_redshift,), dimensionless
         Output redshifts, descending, the last well below the start.
     """
-    start, state = float(reference.time[0]), reference.state[0]
+    start, state = float(reference.time[0]), reference.state[0, :2]
     outputs = -np.log1p(redshift)
     outputs = outputs[outputs > start]
     end = float(outputs[-1])
@@ -192,7 +193,7 @@ def resolve_field(
     )
     return FieldRun(
         recorded,
-        _trajectory(marched, points),
+        _trajectory(marched, points, reference),
         _field(equations, cells, marched),
         cells.step,
         _frequency_error(marched, coarse, points),
@@ -249,8 +250,12 @@ def _points(marched: Marched, outputs: FloatArray) -> FloatArray:
     return points
 
 
-def _trajectory(marched: Marched, points: FloatArray) -> Trajectory:
+def _trajectory(marched: Marched, points: FloatArray, reference: Trajectory) -> Trajectory:
+    """Hydrogen and T_m as marched; helium, which the field does not touch, by the reference."""
     state = CubicSpline(marched.time, marched.state)(points)
+    if reference.state.shape[1] > 2:
+        helium = CubicSpline(reference.time, reference.state[:, 2:])(points)
+        state = np.concatenate([state, helium], axis=1)
     return Trajectory(
         points, state, marched.outcome, 0, int(marched.track.report[kernel.ELIMINATIONS])
     )

@@ -8,7 +8,8 @@ HeII per helium nucleus and second, and y = 1 - x_HeI,
     db/ds = -[F_2 (1/x_HeIII + 1/x_HeII) - F_1/x_HeII]/H.
 
 Where the second ionization is in Saha equilibrium, b is pulled to its value there so fast that it
-stays within 1e-8 of it.
+stays within 1e-7 of it; so it is in any case once x_HeIII is below 4e-18 of x_HeII, where the
+levels of He II keep it 3e-3 (relative) above Saha equilibrium. Below T_r = 1400 K both stand still.
 """
 
 from __future__ import annotations
@@ -34,9 +35,14 @@ from ..network.reduced import Reduced
 from ..network.solve import log_boltzmann_populations, solve_kept
 from .local import Local
 
-# Pull to Saha equilibrium in Hubble rates, and ln of x_HeIII/x_HeII at which it is held: nothing of
-# it is left to see.
-_PULL, _GONE = 1e9, -40.0
+COLDEST_K = 1400.0
+"""T_r below which helium is held as it is, in K: x_HeII is below 1e-9 and falls no further."""
+
+# Pull to Saha equilibrium in Hubble rates, and ln of x_HeIII/x_HeII between which it takes over
+# from the levels of He II, which would only ask for short steps.
+_PULL, _GONE, _FADING = 1e9, -50.0, -40.0
+# From so far above COLDEST_K, in ln T_r, rates fade to nothing.
+_EBB = 0.05
 ION_WEIGHT = 2.0  # of He+ in its ground state
 
 
@@ -280,18 +286,32 @@ class HeliumEquations:
     def rates(self, around: Around, state: FloatArray) -> Rates:
         """Rates of change and derivatives at (a, b)."""
         x = self.fractions(state)
-        if not min(x.neutral, x.single) > 0.0:  # a trial far off; the step is taken again
-            return Rates(
-                *(np.full(shape, np.nan) for shape in ((2,), (2, 2), (2,), (2,), (2,), (2,)))
-            )
+        full, slope = _ramp(math.log(around.radiation_temperature_k / COLDEST_K) / _EBB)
+        if full == 0.0:
+            return _stacked([0.0] * 7, [0.0] * 7)
         first = self.first.flow(around, x.single, x.neutral, self._seen(around))
         lowest = self._first_rates(around, x, first)
-        if self.second is None:
-            return _stacked(lowest, self._saha_rates(around, float(state[1])))
-        if state[1] < _GONE:
-            return _stacked(lowest, [0.0] * 7)
-        second = self.second.flow(around, x.double, x.single)
-        return _stacked(lowest, _second_rates(around, x, first, second))
+        highest = self._upper_rates(around, x, float(state[1]), first)
+        found = _stacked(lowest, highest)
+        if full == 1.0:
+            return found
+        fading = Rates(*(full * part for part in found))
+        return fading._replace(by_time=fading.by_time - slope / _EBB * found.rate)
+
+    def _upper_rates(
+        self, around: Around, x: HeliumFractions, b: float, first: Flow
+    ) -> list[float]:
+        """Rate of b and its derivatives: by the levels of He II, or by Saha equilibrium."""
+        part, slope = _ramp((b - _GONE) / (_FADING - _GONE))
+        if self.second is None or part == 0.0:
+            return self._saha_rates(around, b)
+        levels = _second_rates(around, x, first, self.second.flow(around, x.double, x.single))
+        if part == 1.0:
+            return levels
+        pulled = self._saha_rates(around, b)
+        mixed = [part * n + (1.0 - part) * p for n, p in zip(levels, pulled, strict=True)]
+        mixed[2] += slope / (_FADING - _GONE) * (levels[0] - pulled[0])
+        return mixed
 
     def _seen(self, around: Around) -> Seen:
         """What the lines of He I see of hydrogen and of each other."""
@@ -395,6 +415,12 @@ def _second_rates(around: Around, x: HeliumFractions, first: Flow, second: Flow)
 def _stacked(first: list[float], second: list[float]) -> Rates:
     rows = np.array([first, second])
     return Rates(rows[:, 0], rows[:, 1:3], rows[:, 3], rows[:, 4], rows[:, 5], rows[:, 6])
+
+
+def _ramp(x: float) -> tuple[float, float]:
+    """Smooth step from 0 at x = 0 to 1 at x = 1, and its slope."""
+    x = min(max(x, 0.0), 1.0)
+    return x * x * (3.0 - 2.0 * x), 6.0 * x * (1.0 - x)
 
 
 def _split(log_odds: float) -> tuple[float, float]:

@@ -20,21 +20,24 @@ from ..network.reduced import Reduced
 from ..network.scaled import with_scales
 from ..network.tabulation import TabulatedReduction, live_reduction, node_count, tabulate
 from ..numerics.stepping import Trajectory, integrate
-from ..pieces import Pieces, code_digest, content_key
+from ..pieces import Pieces, code_digest
 from .atom import build_ladder, open_lyman_lines, resonance_lines
 from .cost import table_tolerance
 from .course import Course
 from .equations import SlowEquations
 from .field import FieldRun, resolve_field
+from .helium import HeliumEquations
+from .helium_atom import HeliumAtoms, Recall, build_helium, recall_from
 from .setup import Setup
-from .start import Handover, equilibrium_state, find_handover
+from .start import Handover, equilibrium_state, find_handover, hydrogen_handover
 
 Progress = Callable[[str, float], None]
 
 # Local error allowed in one step over the error asked of the whole. The equations forget, so local
 # errors hardly add up: with 1.0 the neutral fraction was measured to 0.6 and x_e to 0.03 of what is
 # asked.
-_LOCAL = 0.5
+# Those of helium's fractions were measured to 0.12 with the same, and may be larger.
+_LOCAL, _LOCAL_HELIUM = 0.5, 2.0
 # A march with a field, which takes equal steps, starts where the lag is so small; the reference
 # that tells it T_m is integrated to this accuracy.
 _FIELD_LAG, _REFERENCE = 1e-5, 1e-5
@@ -59,12 +62,15 @@ class Integrated(Course):
         The reduced network with the measured constants; `equations` holds it with the setup's.
     field : FieldRun or None
         The march behind it, where the treatment resolves the field.
+    helium : HeliumAtoms or None
+        Helium, where it recombines.
     """
 
     ladder: Ladder
     redshift: FloatArray
     measured: Reduced
     field: FieldRun | None = None
+    helium: HeliumAtoms | None = None
 
 
 def integrate_history(
@@ -90,53 +96,68 @@ def integrate_history(
     """
     tell("atomic data", 0.0)
     chosen = line_treatment or member(setup.lines.hydrogen)
-    handover = setup_handover(setup, chosen)
     resolved = isinstance(chosen, ResolvedField)
     if resolved != (setup.lines.transfer is not None):
         raise InputError(
             'line_treatment: lines.hydrogen = "transfer" goes with the field resolved in frequency '
             "alone, and that with no other; give the setup another treatment"
         )
-    if start_above > handover.redshift and not resolved:
-        handover = Handover(start_above, handover.departure)
-    ladder = build_ladder(setup, keeps=(*chosen.keeps, *setup.lines.field_levels, *keeps))
     redshift = output_redshifts(setup)
+    atoms = None
+    if setup.helium_recombines:
+        hottest_k = float(setup.cosmology.radiation_temperature_k(float(redshift[0])))
+        atoms = build_helium(setup, hottest_k, tell, pieces)
+    helium = None if atoms is None else atoms.equations
+    scout = _scout(setup, chosen, helium)
+    handover = handover_of(setup, scout)
+    resolved = isinstance(chosen, ResolvedField)
+    begin = handover_of_field(setup, scout) if resolved else handover
+    if start_above > handover.redshift and not resolved:
+        handover = replace(handover, redshift=start_above)
+    ladder = build_ladder(setup, keeps=(*chosen.keeps, *setup.lines.field_levels, *keeps))
     factor = scales(setup.physics)
     reduced: Reduced = live_reduction(ladder)
     if setup.accuracy.interpolate:
         low, high = redshift[-1], max(redshift[0], handover.redshift, start_above)
         if resolved:
-            low = _later(_march_redshifts(handover, redshift)[-1], _BEYOND)
+            low = _later(_march_redshifts(begin, redshift)[-1], _BEYOND)
         span = min(low, handover.redshift), high
         reduced = _table(setup, ladder, span, tell, pieces)
-    equations = slow_equations(setup, with_scales(reduced, factor), chosen)
+    equations = slow_equations(setup, with_scales(reduced, factor), chosen, helium)
     if resolved:
-        run = march_field(setup, equations, handover, redshift, tell)
-        return Integrated(run.equations, handover, run.trajectory, ladder, redshift, reduced, run)
+        run = march_field(setup, equations, (handover, begin), redshift, tell)
+        found = run.equations, handover, run.trajectory, ladder, redshift, reduced, run
+        return Integrated(*found, helium=atoms)
     trajectory = integrate_slow(setup, equations, handover, redshift, tell)
-    return Integrated(equations, handover, trajectory, ladder, redshift, reduced)
+    return Integrated(equations, handover, trajectory, ladder, redshift, reduced, helium=atoms)
 
 
 def setup_handover(setup: Setup, chosen: LineTreatment | None = None) -> Handover:
-    """Where a run starts: found with a small atom, since only the lowest levels matter there."""
+    """Where a run of hydrogen starts."""
+    return handover_of(setup, _scout(setup, chosen, None))
+
+
+def _scout(
+    setup: Setup, chosen: LineTreatment | None, helium: HeliumEquations | None
+) -> SlowEquations:
+    """Equations with a small atom, to find hand-overs: only the lowest levels matter there."""
     keeps = () if chosen is None else chosen.keeps
     scout = build_ladder(setup, min(setup.hydrogen.n_max, _SCOUT_N), keeps)
     reduced = with_scales(live_reduction(scout), scales(setup.physics))
-    return handover_of(setup, slow_equations(setup, reduced, chosen))
+    return slow_equations(setup, reduced, chosen, helium)
 
 
 def handover_of(setup: Setup, equations: SlowEquations) -> Handover:
     """Where a run with these equations starts."""
-    lag = 0.1 * setup.accuracy.relative
-    if isinstance(equations.treatment, ResolvedField):
-        lag = max(lag, _FIELD_LAG)
-    return find_handover(equations, lag)
+    if isinstance(equations.treatment, ResolvedField) and equations.helium is None:
+        return handover_of_field(setup, equations)
+    return find_handover(equations, 0.1 * setup.accuracy.relative)
 
 
 def march_field(
     setup: Setup,
     equations: SlowEquations,
-    handover: Handover,
+    handovers: tuple[Handover, Handover],
     redshift: FloatArray,
     tell: Progress,
 ) -> FieldRun:
@@ -144,8 +165,9 @@ def march_field(
 
     Parameters
     ----------
-    setup, equations, handover
-        The run, its equations while the field is a blackbody, and where it starts.
+    setup, equations, handovers
+        The run, its equations while the field is a blackbody, where it starts, and where the field
+        begins: there too, but with helium later.
     redshift : ndarray, shape (n_redshift,), dimensionless
         Output redshifts, descending.
     tell : callable
@@ -156,15 +178,32 @@ def march_field(
     SolveError
         If the integration without the field, or the march, cannot be done.
     """
-    relative = max(setup.accuracy.relative, _REFERENCE)
-    redshift = _march_redshifts(handover, redshift)
-    reference = integrate_slow(setup, equations, handover, redshift, lambda *_: None, relative)
+    handover, begin = handovers
+    # Helium's electrons come from the reference, so that it has to be as good as the march.
+    least = setup.accuracy.relative if equations.helium is not None else _REFERENCE
+    relative = max(setup.accuracy.relative, least)
+    redshift = _march_redshifts(begin, redshift)
+    ends = np.union1d(redshift, [begin.redshift])[::-1]
+    reference = integrate_slow(setup, equations, handover, ends, lambda *_: None, relative)
     if not reference.outcome.ok:
         raise SolveError(reference.outcome.value, outcome=reference.outcome)
     tell("radiation field", 0.0)
-    run = resolve_field(setup, equations, reference, redshift)
+    first = int(np.argmin(np.abs(reference.time + math.log1p(begin.redshift))))
+    later = replace(reference, time=reference.time[first:], state=reference.state[first:])
+    run = resolve_field(setup, equations, later, redshift)
     tell("radiation field", 1.0)
-    return run
+    before = reference.time[:first], reference.state[:first]
+    whole = replace(
+        run.trajectory,
+        time=np.concatenate([before[0], run.trajectory.time]),
+        state=np.concatenate([before[1], run.trajectory.state]),
+    )
+    return run._replace(trajectory=whole)
+
+
+def handover_of_field(setup: Setup, equations: SlowEquations) -> Handover:
+    """Where a resolved field begins; helium has recombined in part by then."""
+    return hydrogen_handover(equations, max(0.1 * setup.accuracy.relative, _FIELD_LAG))
 
 
 def _march_redshifts(handover: Handover, redshift: FloatArray) -> FloatArray:
@@ -179,7 +218,10 @@ def _later(redshift: float, log_growth: float) -> float:
 
 
 def slow_equations(
-    setup: Setup, reduced: Reduced, chosen: LineTreatment | None = None
+    setup: Setup,
+    reduced: Reduced,
+    chosen: LineTreatment | None = None,
+    helium: HeliumEquations | None = None,
 ) -> SlowEquations:
     """Equations of a setup on a reduced network that already has the setup's constants.
 
@@ -191,6 +233,8 @@ def slow_equations(
         The interior of the atom; only the setup's open Lyman lines are used of its np levels.
     chosen : LineTreatment, optional
         In place of the one the setup names.
+    helium : HeliumEquations, optional
+        Where helium recombines.
     """
     factor = scales(setup.physics)
     lines = resonance_lines(reduced.kept, open_lyman_lines(setup), factor, setup.rates.network)
@@ -207,6 +251,7 @@ def slow_equations(
         replace(factor, compton_rate=factor.compton_rate * setup.rates.compton_factor),
         setup.rates.escape_factors(reduced.kept.n[lines.upper]),
         Past.of(lines.energy_ev) if remembers else None,
+        helium,
     )
 
 
@@ -246,12 +291,9 @@ def _table(
     return tabulate(ladder, low_k, high_k, tolerance, on_node, _recall(setup, ladder, pieces))
 
 
-def _recall(
-    setup: Setup, ladder: Ladder, pieces: Pieces | None
-) -> Callable[[float, Callable[[float], FloatArray]], FloatArray] | None:
-    if pieces is None:
-        return None
-    atom = content_key(
+def _recall(setup: Setup, ladder: Ladder, pieces: Pieces | None) -> Recall | None:
+    return recall_from(
+        pieces,
         "reduction",
         code_digest(("constants", "kernels", "numerics", "atomic", "network")),
         ladder.species,
@@ -263,17 +305,6 @@ def _recall(
         *ladder.kept.l.tolist(),
         *(one.key for one in setup.rates.network),
     )
-
-    def recall(temperature_k: float, compute: Callable[[float], FloatArray]) -> FloatArray:
-        key = content_key(atom, temperature_k)
-        found = pieces.get(key)
-        if found is not None and set(found) == {"node"}:
-            return found["node"]
-        value = compute(temperature_k)
-        pieces.put(key, {"node": value})
-        return value
-
-    return recall
 
 
 def integrate_slow(
@@ -296,15 +327,17 @@ def integrate_slow(
 
     equations.remember(start, state)
 
+    local = np.full(len(state), _LOCAL)
+    local[2:] = _LOCAL_HELIUM
     return integrate(
         equations.rate,
         equations.jacobian,
         start,
         state,
         outputs,
-        _LOCAL * (relative or setup.accuracy.relative),
+        local * (relative or setup.accuracy.relative),
         first_step=1e-3,
         max_steps=setup.accuracy.max_steps,
         on_step=on_step,
-        longest_step=math.inf if equations.past is None else equations.past.longest_step,
+        longest_step=equations.longest_step,
     )

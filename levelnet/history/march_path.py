@@ -33,7 +33,7 @@ def make_path(
     equations : SlowEquations
         Cosmology, interior, 2s-1s rate.
     reference : Trajectory
-        Its v gives the T_m to sample at.
+        Its v gives the T_m to sample at, and its helium the electrons of helium.
     start, end : float
         ln a.
     decay : bool
@@ -41,10 +41,10 @@ def make_path(
     """
     count = max(8, math.ceil((end - start) / _SPACING)) + 1
     nodes = np.linspace(start, end, count)
-    lag = CubicSpline(reference.time, reference.state[:, 1])(nodes)
+    along = CubicSpline(reference.time, reference.state)(nodes)
     lower, upper = np.triu_indices(len(equations.reduced.kept), 1)
     stored = np.array(
-        [_sample(equations, s, v, lower, upper, decay) for s, v in zip(nodes, lag, strict=True)]
+        [_sample(equations, s, y, lower, upper, decay) for s, y in zip(nodes, along, strict=True)]
     )
     series = CubicSpline(nodes, stored).c.transpose(1, 0, 2)
     kept, cosmology, lines = equations.reduced.kept, equations.cosmology, equations.lines
@@ -83,8 +83,14 @@ def _scattering_unit(einstein_a_per_s: float, energy_ev: float) -> float:
 
 
 def _sample(
-    equations: SlowEquations, time: float, lag: float, lower: IntArray, upper: IntArray, decay: bool
+    equations: SlowEquations,
+    time: float,
+    state: FloatArray,
+    lower: IntArray,
+    upper: IntArray,
+    decay: bool,
 ) -> FloatArray:
+    lag = float(state[1])
     around = equations.background(time)
     radiation_k, kept = around.radiation_temperature_k, equations.reduced.kept
     rates = equations.reduced.rates(radiation_k, radiation_k * math.exp(lag))
@@ -100,6 +106,7 @@ def _sample(
             rates.recombination_slope_matter,
             lift,
             np.log(np.maximum(down, math.exp(_NEVER))),
-            [math.log(around.hubble_rate_per_s), lag, two_photon],
+            [equations.helium_electrons(state), math.log(around.hubble_rate_per_s)],
+            [lag, two_photon],
         ]
     )

@@ -5,10 +5,38 @@ from __future__ import annotations
 from ..escape.family import TREATMENTS
 from ..escape.left_out import left_out
 from ..escape.treatment import LineTreatment
+from .helium import COLDEST_K
 from .setup import Setup
 
 # Overridden rates that the notes list one by one; the setup holds all.
 _NOTED = 20
+
+
+def _of_helium(setup: Setup) -> list[str]:
+    if not setup.helium_recombines:
+        return [
+            "helium is neutral and inert: x_e misses its electrons above z ~ 1600, where they count"
+        ]
+    higher = setup.lines.helium_higher_lines or "closed"
+    notes = [
+        f"helium: levels to n_max = {setup.helium.n_max}, below T_r = {COLDEST_K:g} K held as it "
+        "is; no collisions, no stimulated two-photon decay of 2 1S",
+        f'helium lines: "{setup.lines.helium or "sobolev"}", n 1P-1 1S with n >= 3: "{higher}"',
+    ]
+    if setup.lines.helium in {None, "sobolev"}:
+        notes.append(
+            "helium lines assume: no hydrogen absorbs inside them; from z ~ 2200 down it does, and "
+            "ends the recombination of He II near z = 1800 (Switzer & Hirata 2008, "
+            "Phys. Rev. D 77, 083006), here far too late"
+        )
+    if higher == "free":
+        notes.append(
+            "helium lines n 1P-1 1S with n >= 3, each on its own: every further n adds escape, so "
+            "that x_e does not converge with helium.n_max"
+        )
+    if setup.helium.helium_ion == "saha":
+        notes.append("He III recombines in Saha equilibrium: x_e up to 1e-3 low near z = 6000")
+    return notes
 
 
 def notes_of(
@@ -31,7 +59,7 @@ def notes_of(
         One statement each; overridden rates come last, with their sources.
     """
     notes = [
-        "helium is neutral and inert: x_e misses its electrons above z ~ 1600, where they count",
+        *_of_helium(setup),
         "excited levels are quasi-steady; there are no collisions and no reionization",
         f'lines: "{chosen.name}"'
         if type(chosen) in {type(one) for one in TREATMENTS}

@@ -44,6 +44,8 @@ def outcome_of(setup: Setup, integrated: Integrated, relaxations: Iterable[float
     if isinstance(table, TabulatedReduction):
         if table.interpolation_error > table_tolerance(setup):
             return Outcome.TABLE_TOO_COARSE
+    if integrated.helium and integrated.helium.interpolation_error > table_tolerance(setup):
+        return Outcome.TABLE_TOO_COARSE
     if any(one < SLOW_RELAXATION for one in relaxations):
         return Outcome.QUASI_STEADY_LOST
     return outcome

@@ -28,6 +28,13 @@ from ..network.tabulation import TabulatedReduction
 from ..numerics.stepping import Trajectory
 from .course import electron_fraction_at, state_at
 from .equations import ionized_and_neutral
+from .helium_outputs import (
+    HeliumMoment,
+    closure_error,
+    helium_figures,
+    helium_moments,
+    helium_species,
+)
 from .integrate import Integrated, Progress
 from .limits import field_notes, limit_notes
 from .local import Local
@@ -68,7 +75,9 @@ def assemble_history(setup: Setup, integrated: Integrated, tell: Progress) -> Hi
     if not len(redshift):
         raise SolveError(trajectory.outcome.value, outcome=trajectory.outcome)
     outputs = _outputs(integrated, redshift, tell)
-    slowest = min((o.relaxation_hubble for o in outputs), default=math.inf)
+    moments = helium_moments(integrated, redshift)
+    every = [one.relaxation_hubble for one in outputs]
+    slowest = min([*every, *(one.relaxation_hubble for one in moments)], default=math.inf)
     outcome = outcome_of(setup, integrated, [slowest])
     conditions = [o.local.conditions for o in outputs]
     electron_fraction = np.array([c.electron_fraction for c in conditions])
@@ -76,7 +85,7 @@ def assemble_history(setup: Setup, integrated: Integrated, tell: Progress) -> Hi
     depth, visibility, marks = _seen(integrated, redshift, hydrogen_cm3 * electron_fraction)
     ionized = np.array([c.ionized_fraction for c in conditions])
     ground = np.array([c.ground_fraction for c in conditions])
-    nothing = np.zeros(len(redshift))
+    helium = _helium_fractions(moments, len(redshift))
     steps = steps_of(integrated)
     figures = line_figures(
         integrated, steps, redshift, [o.local for o in outputs], [o.lost_per_s for o in outputs]
@@ -85,6 +94,14 @@ def assemble_history(setup: Setup, integrated: Integrated, tell: Progress) -> Hi
     warnings = limit_notes(redshift, ground / electron_fraction, figures, chosen)
     if integrated.field is not None:
         warnings += field_notes(integrated.field.frequency_step, integrated.field.frequency_error)
+    species: tuple[SpeciesPopulations, ...] = (_species(integrated, outputs),)
+    figures_of_helium, atoms = None, integrated.helium
+    if atoms is not None:
+        species += helium_species(atoms, setup.cosmology.helium_ratio(), moments)
+        closure = closure_error(
+            integrated.equations, electron_fraction, np.array([ground, ionized]), helium
+        )
+        figures_of_helium = helium_figures(integrated, atoms, moments, closure)
     return History(
         setup,
         outcome,
@@ -92,9 +109,9 @@ def assemble_history(setup: Setup, integrated: Integrated, tell: Progress) -> Hi
         electron_fraction,
         ionized,
         ground,
-        nothing + 1.0,
-        nothing,
-        nothing,
+        helium[0],
+        helium[1],
+        helium[2],
         np.array([c.matter_temperature_k for c in conditions]),
         np.array([c.radiation_temperature_k for c in conditions]),
         hydrogen_cm3,
@@ -102,14 +119,22 @@ def assemble_history(setup: Setup, integrated: Integrated, tell: Progress) -> Hi
         setup.cosmology.cosmic_time_s(redshift),
         depth,
         visibility,
-        (_species(integrated, outputs),),
+        species,
         channels(integrated, steps, redshift, np.array([o.local.solution.flow for o in outputs])),
         figures,
         marks,
         _diagnostics(integrated, outputs, slowest),
         notes_of(setup, chosen, warnings),
         None if integrated.field is None else integrated.field.field,
+        figures_of_helium,
     )
+
+
+def _helium_fractions(moments: list[HeliumMoment], count: int) -> FloatArray:
+    """Neutral, singly and doubly ionized part of the helium nuclei, shape (3, count)."""
+    if moments:
+        return np.array([one.fractions[:3] for one in moments]).T
+    return np.array([np.ones(count), np.zeros(count), np.zeros(count)])
 
 
 def _outputs(integrated: Integrated, redshift: FloatArray, tell: Progress) -> list[_Output]:

@@ -8,13 +8,17 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from ..arrays import FloatArray, frozen_array
+from ..atomic.helium_levels import HeliumLevels
 from ..atomic.levels import LevelSet
 from ..errors import InputError, Outcome, SolveError
+from .helium_record import HeliumFigures
 from .line_figures import LineFigures
 from .setup import Setup
 
 if TYPE_CHECKING:
     import xarray
+
+Levels = LevelSet | HeliumLevels
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -24,18 +28,19 @@ class SpeciesPopulations:
     Attributes
     ----------
     name : str
-        The species, "H I".
-    levels : LevelSet
+        The species: "H I", "He I", "He II".
+    levels : LevelSet or HeliumLevels
         Quantum numbers, weights and energies, shape (n_levels,).
     population : ndarray, shape (n_redshift, n_levels), dimensionless
         Atoms in the level per hydrogen nucleus; below 1e-300 it is 0 by statement.
     log_departure : ndarray, shape (n_redshift, n_levels), dimensionless
         Natural logarithm of the departure coefficient b = x / x_Saha, with x_Saha the
-        Saha-Boltzmann population at T_m with the actual n_e and n_ion. Always finite.
+        Saha-Boltzmann population at T_m with the actual n_e and n_ion. NaN where helium is held as
+        it is (T_r below 1400 K), and only there; excited levels then have population 0.
     """
 
     name: str
-    levels: LevelSet
+    levels: Levels
     population: FloatArray
     log_departure: FloatArray
 
@@ -258,6 +263,8 @@ class History:
         What a user must know before relying on the result.
     field : RadiationField or None
         The field at some of the output redshifts, where the line treatment resolves it.
+    helium : HeliumFigures or None
+        Channels and lines of helium, where it recombines.
     """
 
     setup: Setup
@@ -283,6 +290,7 @@ class History:
     diagnostics: Diagnostics
     notes: tuple[str, ...] = ()
     field: RadiationField | None = None
+    helium: HeliumFigures | None = None
 
     def __post_init__(self) -> None:
         """Check shapes and make every array read-only."""
@@ -302,7 +310,7 @@ class History:
         """Natural log of the departure coefficients, shape (n_redshift, n_levels)."""
         return self._species(species).log_departure
 
-    def levels(self, species: str) -> LevelSet:
+    def levels(self, species: str) -> Levels:
         """Quantum numbers, weights and energies of the levels of `species`."""
         return self._species(species).levels
 

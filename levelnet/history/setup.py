@@ -101,7 +101,7 @@ class Setup:
     hydrogen : Hydrogen
         The hydrogen atom.
     helium : Helium, optional
-        The helium atom; inert for now.
+        The helium atom; inert if left out.
     lines : Lines, optional
         How line photons escape.
     grid : Grid, optional
@@ -148,6 +148,22 @@ class Setup:
         self._check_feedback()
         self._check_transfer()
         self._check_overrides_act()
+        self._check_helium()
+
+    def _check_helium(self) -> None:
+        """Refuse treatments of lines that are not there, and what helium's levels do not know."""
+        if self.helium.n_max == 0:
+            for name in ("helium", "helium_higher_lines"):
+                if getattr(self.lines, name) is not None:
+                    raise ValueError(
+                        f"lines.{name}: helium is inert with helium.n_max = 0 and has no lines; "
+                        "allowed from helium.n_max = 2"
+                    )
+        elif self.physics != Physics():
+            raise ValueError(
+                "physics: changed constants are not known for the levels of helium; allowed with "
+                "helium.n_max = 0"
+            )
 
     def _check_feedback(self) -> None:
         """Refuse feedback among so many lines that steps shorter than its delays take for ever."""
@@ -217,6 +233,19 @@ class Setup:
         count, n_max = self.lines.lyman_lines, self.hydrogen.n_max
         lines = n_max - 1 if isinstance(count, str) else count
         return AtomSize(n_max, self.hydrogen.highest_resolved, lines)
+
+    @property
+    def helium_recombines(self) -> bool:
+        """Whether helium is among the slow variables: it has levels, and there is some."""
+        return self.helium.n_max > 0 and self.cosmology.helium_ratio() > 0.0
+
+    def require_inert_helium(self, who: str) -> None:
+        """Raise InputError, which names `who` asks, where helium recombines."""
+        if self.helium_recombines:
+            raise InputError(
+                f"helium.n_max = {self.helium.n_max}: {who} knows hydrogen alone; allowed there is "
+                "0 (helium neutral and inert)"
+            )
 
     @property
     def frequency_step(self) -> float:

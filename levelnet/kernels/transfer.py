@@ -29,7 +29,7 @@ IntArray = NDArray[np.int64]
 
 DONE, SINGULAR, NOT_CONVERGED = 0, 1, 2
 # Places in the series of a `Path`, after what it holds of levels and pairs.
-LOG_HUBBLE, LOG_LAG, LOG_DECAY = -3, -2, -1
+HELIUM, LOG_HUBBLE, LOG_LAG, LOG_DECAY = -4, -3, -2, -1
 # Places in the report of a `Track`.
 STEPS, ELIMINATIONS, PHOTON_ERROR, ATOM_ERROR = 0, 1, 2, 3
 # Exchange with the neighbours in one step above which the mean of a cell leans to its end, so that
@@ -447,9 +447,9 @@ class Path(NamedTuple):
     series : ndarray, shape (n_pieces, 4, n_stored)
         Cubic pieces in the distance from their lower node, highest power first, of: ln A_i at the
         reference T_m, its slope in ln T_m, ln of B_i x_B,i/x_1s, ln of the downward exchange of
-        each pair; then, at `LOG_HUBBLE`, `LOG_LAG` and `LOG_DECAY`, ln H, ln of the reference T_m
-        over T_r, ln of the 2s-1s rate that does not go through the field. Beyond the nodes the last
-        piece goes on.
+        each pair; then, at `HELIUM`, `LOG_HUBBLE`, `LOG_LAG` and `LOG_DECAY`, the electrons of
+        helium per hydrogen nucleus, ln H, ln of the reference T_m over T_r, ln of the 2s-1s rate
+        that does not go through the field. Beyond the nodes the last piece goes on.
     lower, upper : ndarray of int, shape (n_pairs,)
         Pairs of kept levels.
     weight_ratio, energy_ev : ndarray, shape (n_kept,)
@@ -614,14 +614,15 @@ class Slow(NamedTuple):
     ----------
     hubble_per_s, hydrogen_cm3, radiation_kt_ev : float
         H, n_H, k T_r.
-    electrons, ground, lag : float
-        x_e, x_1s and v.
+    electrons, ions, ground, lag : float
+        x_e, x_HII, x_1s and v.
     """
 
     hubble_per_s: float
     hydrogen_cm3: float
     radiation_kt_ev: float
     electrons: float
+    ions: float
     ground: float
     lag: float
 
@@ -657,7 +658,7 @@ def _flow(cells: Cells, path: Path, slow: Slow, room: Room, balance: Balance) ->
             loss[i, k] = 0.0
     loss[0, 0] = math.exp(stored[LOG_DECAY])
     couple_field(cells, _moment(path, slow), path.weight_ratio, room, loss, source)
-    log_pairs = math.log(slow.hydrogen_cm3) + 2.0 * math.log(slow.electrons)
+    log_pairs = math.log(slow.hydrogen_cm3) + (math.log(slow.electrons) + math.log(slow.ions))
     for i in range(n):
         log_capture = stored[i] + stored[n + i] * (slow.lag - stored[LOG_LAG]) + log_pairs
         log_lift = stored[2 * n + i] + math.log(slow.ground)
@@ -735,10 +736,11 @@ def _settle(
     for count in range(limits[1]):
         if not -neutral < guess < ionized:
             guess = max(-0.5 * neutral, min(0.5 * ionized, guess))
-        electrons, ground = ionized - 0.5 * guess, neutral + 0.5 * guess
+        ions, ground = ionized - 0.5 * guess, neutral + 0.5 * guess
+        electrons = ions + balance.stored[-4]
         share = electrons / (1.0 + path.helium_ratio + electrons)
         v = _matter_lag(before, compton * share, cells.step)
-        slow = Slow(hubble, here.hydrogen_cm3, here.radiation_kt_ev, electrons, ground, v)
+        slow = Slow(hubble, here.hydrogen_cm3, here.radiation_kt_ev, electrons, ions, ground, v)
         flow = _flow(cells, path, slow, room, balance)
         if not math.isfinite(flow):
             return Attempt(guess, miss, slope, flow, slow, 0, False)
@@ -834,9 +836,9 @@ def march(
         _interior(path, kt, balance.stored, balance.interior)
         hydrogen = path.hydrogen_cm3 * math.exp(-3.0 * middle)
         v = track.state[step, 1]
-        here = Slow(
-            math.exp(balance.stored[LOG_HUBBLE]), hydrogen, kt, fractions[0], fractions[1], v
-        )
+        electrons = fractions[0] + balance.stored[HELIUM]
+        hubble = math.exp(balance.stored[LOG_HUBBLE])
+        here = Slow(hubble, hydrogen, kt, electrons, fractions[0], fractions[1], v)
         guess = gains[0]
         if step > 5:  # as a cubic goes on
             guess = 4.0 * gains[0] - 6.0 * gains[1] + 4.0 * gains[2] - gains[3]

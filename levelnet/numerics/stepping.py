@@ -121,7 +121,7 @@ def integrate(  # noqa: PLR0913 (each is a choice of the caller)
     start: float,
     state: FloatArray,
     outputs: Sequence[float],
-    tolerance: float,
+    tolerance: float | FloatArray,
     *,
     first_step: float,
     max_steps: int,
@@ -137,11 +137,11 @@ def integrate(  # noqa: PLR0913 (each is a choice of the caller)
     start : float
         Initial time.
     state : ndarray, shape (n,)
-        Initial variables; scaled so that one absolute tolerance serves them all.
+        Initial variables; scaled so that an absolute tolerance serves them.
     outputs : sequence of float
         Ascending times, all above `start`; steps end on each exactly.
-    tolerance : float
-        Largest absolute local error of any variable in one step.
+    tolerance : float or ndarray, shape (n,)
+        Largest absolute local error of any variable, or of each, in one step.
     first_step : float
         Length of the first step tried.
     max_steps : int
@@ -198,11 +198,11 @@ def _attempt(
     span: tuple[float, float],
     state: FloatArray,
     first: FloatArray,
-    tolerance: float,
+    tolerance: float | FloatArray,
 ) -> tuple[FloatArray, FloatArray, float]:
     """One step over `span`: new state, its rate (where it is good), error over tolerance."""
     new, error = rosenbrock_step(rate, jacobian, span[0], state, first, span[1] - span[0])
-    size = float(np.max(np.abs(error))) / tolerance
+    size = float(np.max(np.abs(error) / tolerance))
     if not np.isfinite(size):
         return new, first, np.inf
     return new, rate(span[1], new) if size <= 1.0 else first, size

@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from ..arrays import FloatArray
+from ..atomic.helium_levels import HeliumLevels
 from ..atomic.levels import LevelSet
 from ..errors import InputError
 from ..history.result import History
@@ -21,6 +22,16 @@ _VECTOR_N_MAX = 60  # above, the cells of the map are drawn as pixels: 5e4 outli
 _N_PANELS = 4
 _MOST_TICKS = 9
 _LETTERS = "spdf"
+
+
+def _drawable(history: History, species: str) -> LevelSet:
+    """Levels of a species with one level for each n and l."""
+    levels = history.levels(species)
+    if isinstance(levels, HeliumLevels):
+        raise InputError(
+            f'species "{species}": has two levels for each n and l; drawn are "H I" and "He II"'
+        )
+    return levels
 
 
 def departure_map_figure(
@@ -49,7 +60,7 @@ def departure_map_figure(
     InputError
         If `redshift` lies outside the outputs, or the species is not in the history.
     """
-    levels, row = history.levels(species), output_row(history, redshift)
+    levels, row = _drawable(history, species), output_row(history, redshift)
     grid = _level_grid(levels, history.log_departures(species)[row])
     n_max = int(levels.n[-1])
     with style.house_style():
@@ -119,13 +130,13 @@ def departure_curves_figure(
     InputError
         If a redshift lies outside the outputs, or the species is not in the history.
     """
-    rows = _panel_rows(history, redshifts)
+    levels, rows = _drawable(history, species), _panel_rows(history, redshifts)
     with style.house_style():
         figure = style.new_figure(style.TWO_COLUMNS_IN, 4.6 if len(rows) > 2 else 2.5)
         shape = (2, 2) if len(rows) > 2 else (1, len(rows))
         panels = figure.subplots(*shape, sharex=True, squeeze=False).ravel()
         for axes, row, letter in zip(panels, rows, "abcd", strict=False):
-            _draw_curves(axes, history.levels(species), history.log_departures(species)[row])
+            _draw_curves(axes, levels, history.log_departures(species)[row])
             style.panel_letter(axes, letter)
             axes.set_title(_conditions(history, row, species), fontsize=7.5, loc="right", pad=4.0)
         for axes in panels[len(rows) :]:

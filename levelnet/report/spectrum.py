@@ -49,7 +49,9 @@ def spectrum_figure(history: History, redshifts: Sequence[float] | None = None) 
     """
     if history.field is None:
         raise InputError("spectrum: this history holds no radiation field")
-    return field_figure(history.field, history.levels("H I"), redshifts)
+    hydrogen = history.levels("H I")
+    assert isinstance(hydrogen, LevelSet)
+    return field_figure(history.field, hydrogen, redshifts)
 
 
 def field_figure(

@@ -46,6 +46,10 @@ def _level(name: str, units: str, long_name: str, kind: Kind = "float64") -> Var
     return Variable(name, ("level",), units, long_name, record_field, kind, coordinates)
 
 
+def _of_helium(name: str, long_name: str, dimensions: tuple[str, ...] = ()) -> Variable:
+    return Variable(name, dimensions, "1", long_name, f"helium.{name}")
+
+
 def _population(name: str, long_name: str) -> Variable:
     dimensions = ("redshift", "level")
     return Variable(name, dimensions, "1", long_name, f"species.{name}", coordinates="n l")
@@ -214,6 +218,48 @@ SPECIES_VARIABLES = (
     ),
 )
 
+# Of He I: terms of two spins, and weights of a two-electron atom.
+HELIUM_VARIABLES = (
+    *SPECIES_VARIABLES[:4],
+    Variable("s", ("level",), "1", "total spin, 0 or 1", "species.levels.spin", "int64", "n l"),
+    _level("statistical_weight", "1", "statistical weight (2 s + 1) (2 l + 1)"),
+    *SPECIES_VARIABLES[5:],
+)
+
+HELIUM = Group(
+    "helium_recombination",
+    "how He II recombined to He I; NaN where helium is held as it is",
+    (
+        REDSHIFT,
+        Variable(
+            "channel",
+            ("channel",),
+            "",
+            "term and ground state; 2 1S-1 1S: two photons",
+            "helium.channels",
+            "text",
+        ),
+        Variable(
+            "net_rate_per_s",
+            ("redshift", "channel"),
+            "s-1",
+            "net transitions to the ground state per hydrogen nucleus",
+            "helium.net_rate_per_s",
+        ),
+        Variable("line", ("line",), "", "level or term and ground state", "helium.lines", "text"),
+        _of_helium("optical_depth", "Sobolev optical depth", ("redshift", "line")),
+        _of_helium(
+            "escape_probability", "chance that a photon of the line escapes", ("redshift", "line")
+        ),
+        _of_helium("handover_departure", "relative lag of x_HeI at the hand-over"),
+        _of_helium("handover_ion_departure", "relative lag of x_HeII/x_HeIII at the hand-over"),
+        Variable("nodes", (), "1", "reductions of He I and He II", "helium.nodes", "int64"),
+        _of_helium("interpolation_error", "largest error off the nodes of ln of any reduced rate"),
+        _of_helium("conservation_error", "largest relative imbalance of the populations"),
+        _of_helium("closure_error", "largest miss in sums of fractions, and in charge over x_e"),
+    ),
+)
+
 FIXED_GROUPS = (HISTORY, LINES, CHANNELS, MILESTONES, DIAGNOSTICS, NOTES)
 
 # Attributes of the file as a whole; all are text but the layout version.
@@ -238,7 +284,8 @@ ROOT_ATTRIBUTES = {
 def species_group(species: str) -> Group:
     """Return the group that holds the populations of `species` ("H I")."""
     description = f"levels of {species}: quantum numbers, energies, populations"
-    return Group(SPECIES_GROUPS[species], description, SPECIES_VARIABLES, species)
+    variables = HELIUM_VARIABLES if species == "He I" else SPECIES_VARIABLES
+    return Group(SPECIES_GROUPS[species], description, variables, species)
 
 
 HISTORY_LAYOUT = Layout(
@@ -247,16 +294,18 @@ HISTORY_LAYOUT = Layout(
     "a history",
     ROOT_ATTRIBUTES,
     FIXED_GROUPS,
-    (*(species_group(name) for name in SPECIES_GROUPS), FIELD),
+    (*(species_group(name) for name in SPECIES_GROUPS), FIELD, HELIUM),
 )
 
 
-def groups_of(species: tuple[str, ...], with_field: bool = False) -> tuple[Group, ...]:
-    """All groups of a file with these species, and the field or not, in the order of writing."""
+def groups_of(
+    species: tuple[str, ...], with_field: bool = False, with_helium: bool = False
+) -> tuple[Group, ...]:
+    """All groups of a file with these species and parts, in the order of writing."""
     some = (HISTORY, *(species_group(name) for name in species), *FIXED_GROUPS[1:])
-    return (*some, FIELD) if with_field else some
+    return (*some, *[FIELD] * with_field, *[HELIUM] * with_helium)
 
 
 def describe_layout() -> str:
     """Return the layout as text: one line for each group, dataset and attribute of the file."""
-    return describe(HISTORY_LAYOUT, groups_of(("H I",), with_field=True))
+    return describe(HISTORY_LAYOUT, groups_of(tuple(SPECIES_GROUPS), True, True))

@@ -8,8 +8,10 @@ from collections.abc import Callable
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
+from ..atomic.helium_levels import HeliumLevels
 from ..atomic.levels import LevelSet
 from ..errors import FileFormatError, InputError, LevelnetError
+from ..history.helium_record import HeliumFigures
 from ..history.line_figures import LineFigures
 from ..history.result import (
     Channels,
@@ -138,14 +140,15 @@ def history_of(content: Content) -> History:
     species = tuple(given["species"] for given in content.groups.values() if "species" in given)
     parts: dict[str, Any] = {}
     populations = []
-    for group in layout.groups_of(species, layout.FIELD.name in content.groups):
+    given = (part.name in content.groups for part in (layout.FIELD, layout.HELIUM))
+    for group in layout.groups_of(species, *given):
         fields = fields_of(content, group)
         own = fields.pop("species", None)
         if own is not None:
-            levels = LevelSet(**own.pop("levels"))
+            levels = _levels_of(group.species, own.pop("levels"))
             populations.append(SpeciesPopulations(name=group.species, levels=levels, **own))
         parts |= fields
-    field = parts.pop("field", None)
+    field, helium = parts.pop("field", None), parts.pop("helium", None)
     return History(
         setup=parse_setup(str(content.attributes["setup"]), "stored setup"),
         outcome=outcome_of(content),
@@ -155,8 +158,15 @@ def history_of(content: Content) -> History:
         milestones=Milestones(**parts.pop("milestones")),
         diagnostics=Diagnostics(**parts.pop("diagnostics")),
         field=None if field is None else RadiationField(**field),
+        helium=None if helium is None else HeliumFigures(**helium),
         **parts,
     )
+
+
+def _levels_of(species: str, given: dict[str, Any]) -> LevelSet | HeliumLevels:
+    if species != "He I":
+        return LevelSet(**given)
+    return HeliumLevels(n_max=int(given["n"].max()), nuclear_charge=2, **given)
 
 
 def distilled_of(content: Content) -> FastHistory:

@@ -128,7 +128,8 @@ def _history_content(history: History) -> Content:
     if unknown or len(species) < len(history.species):
         allowed = ", ".join(layout.SPECIES_GROUPS)
         raise InputError(f"species {unknown or 'given twice'}: allowed, each once: {allowed}")
-    for group in layout.groups_of(tuple(species), history.field is not None):
+    parts = history.field is not None, history.helium is not None
+    for group in layout.groups_of(tuple(species), *parts):
         _add_group(content, group, history, species.get(group.species))
     return content
 

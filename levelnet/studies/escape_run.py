@@ -9,7 +9,6 @@ import numpy as np
 from ..arrays import FloatArray
 from ..errors import Outcome, SolveError
 from ..history.course import state_at
-from ..history.equations import ionized_and_neutral
 from ..history.outcome import outcome_of, relaxation_hubble
 from ..history.outputs import channels
 from ..history.result import Channels, RadiationField
@@ -102,7 +101,7 @@ def compute_variant(
         seen = observed(setup, integrated, optical_depth_to)
         flows = np.array([one.solution.flow for one in here])
         return VariantResult(
-            np.array([ionized_and_neutral(u)[0] for u in states[:, 0].tolist()]),
+            np.array([integrated.equations.electron_fraction(one) for one in states]),
             setup.cosmology.radiation_temperature_k(redshift) * np.exp(states[:, 1]),
             seen.names,
             seen.units,

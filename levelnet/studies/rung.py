@@ -23,7 +23,6 @@ from ..background.last_scattering import Observed, ionized_redshift, observe
 from ..background.quadrature import quadrature
 from ..errors import Outcome, SolveError
 from ..history.course import electron_fraction_at, state_at
-from ..history.equations import ionized_and_neutral
 from ..history.integrate import Integrated, integrate_history, output_redshifts
 from ..history.outcome import outcome_of, relaxation_hubble
 from ..history.outputs import solve_levels
@@ -141,7 +140,7 @@ def compute_rung(
         seen = observed(setup, integrated, optical_depth_to)
         radiation_k = setup.cosmology.radiation_temperature_k(redshift)
         return RungResult(
-            np.array([ionized_and_neutral(u)[0] for u in states[:, 0].tolist()]),
+            np.array([integrated.equations.electron_fraction(one) for one in states]),
             radiation_k * np.exp(states[:, 1]),
             seen.names,
             seen.units,
@@ -178,20 +177,28 @@ def integrate_observed(
     setup: Setup, pieces: Pieces | None, keeps: tuple[tuple[int, int], ...] = ()
 ) -> Integrated:
     """Integrate from where observables start, or know the network from there."""
-    start = ionized_redshift(setup.cosmology)
+    start = ionized_redshift(setup.cosmology, setup.helium_recombines)
     return integrate_history(setup, lambda *_: None, pieces, keeps=keeps, start_above=start)
 
 
 def observed(setup: Setup, integrated: Integrated, optical_depth_to: tuple[float, ...]) -> Observed:
     """What an observer makes of the history, in equilibrium above its start."""
     redshift = integrated.redshift
-    ionized = ionized_redshift(setup.cosmology)
+    ionized = ionized_redshift(setup.cosmology, setup.helium_recombines)
     start = max(ionized, integrated.handover.redshift, float(redshift[0]))
     ends = -math.log1p(start), -math.log1p(float(redshift[-1]))
     grid = quadrature(setup.cosmology, *ends)
     electrons = electron_fraction_at(integrated, grid.points)
     thomson = integrated.equations.scales.thomson
-    return observe(setup.cosmology, grid, electrons, thomson, optical_depth_to)
+    helium = setup.cosmology.helium_ratio() if setup.helium_recombines else 0.0
+    return observe(
+        setup.cosmology,
+        grid,
+        electrons,
+        thomson,
+        optical_depth_to,
+        early_electron_fraction=1.0 + 2.0 * helium,
+    )
 
 
 def _low_populations(integrated: Integrated, redshift: tuple[float, ...]) -> FloatArray:

@@ -102,6 +102,7 @@ def weigh(
     tell = progress or (lambda stage, fraction: None)
     if not isinstance(setup, Setup):
         raise InputError(f"setup: a Setup is needed, not {type(setup).__name__}")
+    setup.require_inert_helium("weigh")
     listed = [targets] if isinstance(targets, str) else list(targets)
     if not listed or not all(isinstance(text, str) for text in listed):
         raise InputError("targets: name at least one, such as x_e(900), as text")

@@ -140,6 +140,7 @@ def test_atom_number(which: str) -> None:
         around.hydrogen_density_cm3,
         const.BOLTZMANN_EV_K * around.radiation_temperature_k,
         around.electron_fraction,
+        around.ionized_fraction,
         around.ground_fraction,
         math.log(0.99),
     )

@@ -9,12 +9,12 @@ from scipy.integrate import quad
 from levelnet import constants as const
 from levelnet.atomic import helium_two_photon as module
 from levelnet.atomic.helium_two_photon import (
-    TWO_PHOTON_PER_S,
     helium_two_photon_factor,
     helium_two_photon_profile,
     helium_two_photon_slope,
     transition_energy_ev,
 )
+from levelnet.atomic.species import TWO_PHOTON_PER_S
 from levelnet.errors import RangeError
 from levelnet.tables import read_table
 

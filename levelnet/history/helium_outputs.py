@@ -1,0 +1,171 @@
+"""Helium at the output redshifts: fractions, populations of every level, figures."""
+
+from __future__ import annotations
+
+import math
+from typing import NamedTuple
+
+import numpy as np
+
+from ..arrays import FloatArray
+from ..network.assembly import Workspace, factor_interior
+from ..network.helium_populations import helium_populations
+from ..network.populations import LevelPopulations, populations
+from .course import state_at
+from .equations import SlowEquations
+from .helium import COLDEST_K, HeliumEquations, HeliumFractions
+from .helium_atom import HeliumAtoms
+from .helium_record import HeliumFigures
+from .integrate import Integrated
+from .local import Local
+from .outcome import relaxation_hubble
+from .result import Levels, SpeciesPopulations
+
+_SMALLEST_LOG = math.log(1e-300)
+# Levels of helium count for the outcome while so much of it is ionized.
+_COUNTS = 1e-6
+
+
+class HeliumMoment(NamedTuple):
+    """Helium at one output redshift.
+
+    Attributes
+    ----------
+    fractions : HeliumFractions
+        Of its nuclei.
+    first : Local or None
+        Kept levels of He I; None where helium is held.
+    levels : tuple of LevelPopulations
+        He I, then He II where it has levels.
+    relaxation_hubble : float, dimensionless
+        Slowest relaxation of the kept levels over the Hubble rate; infinite where it does not
+        count.
+    """
+
+    fractions: HeliumFractions
+    first: Local | None
+    levels: tuple[LevelPopulations, ...]
+    relaxation_hubble: float
+
+
+def helium_moments(integrated: Integrated, redshift: FloatArray) -> list[HeliumMoment]:
+    """Helium at the output redshifts; nothing where it is inert."""
+    atoms = integrated.helium
+    if atoms is None:
+        return []
+    work = None if atoms.second is None else Workspace.of(atoms.second)
+    return [_moment(integrated, atoms, work, z) for z in redshift.tolist()]
+
+
+def _moment(
+    integrated: Integrated, atoms: HeliumAtoms, work: Workspace | None, redshift: float
+) -> HeliumMoment:
+    log_scale = -math.log1p(redshift)
+    state, equations = state_at(integrated, log_scale), integrated.equations
+    around = equations.helium_around(log_scale, state)
+    x = HeliumEquations.fractions(state[2:])
+    one = atoms.equations.first
+    conditions = one.conditions(around, x.single, x.neutral)
+    if around.radiation_temperature_k < COLDEST_K:
+        held = [_ground_alone(len(atoms.first.levels), x.neutral)]
+        if atoms.second is not None:
+            held.append(_ground_alone(len(atoms.second.levels), x.single))
+        return HeliumMoment(x, None, tuple(held), math.inf)
+    first = atoms.equations.first_local(around, state[2:])
+    found = [helium_populations(atoms.first, first.solution.log_population, conditions)]
+    slowest = relaxation_hubble(first) if min(x.neutral, x.single) > _COUNTS else math.inf
+    two = atoms.equations.second
+    if two is not None and atoms.second is not None and work is not None:
+        conditions = two.conditions(around, x.double, x.single)
+        second = two.solve(conditions)
+        factored = factor_interior(atoms.second, conditions.radiation_temperature_k, work)
+        found.append(populations(factored, second.solution.log_population, conditions))
+        if min(x.double, x.single) > _COUNTS:
+            slowest = min(slowest, relaxation_hubble(second))
+    return HeliumMoment(x, first, tuple(found), slowest)
+
+
+def _ground_alone(count: int, fraction: float) -> LevelPopulations:
+    """Levels of helium that is held: the ground state alone is known."""
+    log_population = np.full(count, -np.inf)
+    log_population[0] = math.log(fraction)
+    return LevelPopulations(log_population, np.full(count, np.nan), 0.0)
+
+
+def helium_species(
+    atoms: HeliumAtoms, ratio: float, moments: list[HeliumMoment]
+) -> tuple[SpeciesPopulations, ...]:
+    """Populations of He I, and of He II where it has levels, per hydrogen nucleus.
+
+    Parameters
+    ----------
+    atoms : HeliumAtoms
+        The atoms.
+    ratio : float, dimensionless
+        Helium nuclei per hydrogen nucleus.
+    moments : list of HeliumMoment
+        Helium at every output.
+    """
+    named: list[tuple[str, Levels]] = [("He I", atoms.first.levels)]
+    if atoms.second is not None:
+        named.append((atoms.second.species, atoms.second.levels))
+    made = []
+    for k, (name, levels) in enumerate(named):
+        log_population = np.array([one.levels[k].log_population for one in moments])
+        log_population += math.log(ratio)
+        known = log_population >= _SMALLEST_LOG
+        population = np.where(known, np.exp(np.where(known, log_population, 0.0)), 0.0)
+        departure = np.array([one.levels[k].log_departure for one in moments])
+        made.append(SpeciesPopulations(name, levels, population, departure))
+    return tuple(made)
+
+
+def helium_figures(
+    integrated: Integrated, atoms: HeliumAtoms, moments: list[HeliumMoment], closure: float
+) -> HeliumFigures:
+    """Channels, lines and how it went; `closure` is the miss in the sums of fractions."""
+    network, handover = atoms.equations.first, integrated.handover
+    ratio = integrated.equations.cosmology.helium_ratio()
+    names = network.lines.names
+    flow = np.full((len(moments), len(network.reduced.kept)), np.nan)
+    depth, escape = np.full((2, len(moments), len(names)), np.nan)
+    for k, one in enumerate(moments):
+        if one.first is not None:
+            said = one.first.coupling.validity
+            flow[k] = ratio * one.first.solution.flow
+            depth[k] = said.get("optical_depth", np.nan)
+            escape[k] = said.get("escape_probability", np.nan)
+    levels = atoms.first.levels
+    return HeliumFigures(
+        tuple(f"{levels.name(int(k))}-{levels.name(0)}" for k in atoms.first.kept_position),
+        flow,
+        names,
+        depth,
+        escape,
+        handover.helium_departure,
+        handover.helium_ion_departure,
+        atoms.nodes,
+        atoms.interpolation_error,
+        max(level.conservation_error for one in moments for level in one.levels),
+        closure,
+    )
+
+
+def closure_error(
+    equations: SlowEquations, electrons: FloatArray, hydrogen: FloatArray, helium: FloatArray
+) -> float:
+    """Largest miss in the sums of fractions, and in the charge over x_e.
+
+    Parameters
+    ----------
+    equations : SlowEquations
+        The run.
+    electrons : ndarray, shape (n_redshift,), dimensionless
+        x_e.
+    hydrogen, helium : ndarray, shapes (2, n_redshift) and (3, n_redshift), dimensionless
+        Fractions by charge, from 0.
+    """
+    ratio = equations.cosmology.helium_ratio()
+    charge = hydrogen[1] + ratio * (helium[1] + 2.0 * helium[2])
+    misses = hydrogen.sum(axis=0) - 1.0, helium.sum(axis=0) - 1.0, charge / electrons - 1.0
+    return float(np.max(np.abs(misses)))

@@ -1,0 +1,215 @@
+"""He I and He II reduced, in equilibrium, and among the slow variables."""
+
+from __future__ import annotations
+
+import math
+
+import numpy as np
+import pytest
+
+from levelnet.atomic.levels import ionization_scale_ev, reduced_mass_ratio
+from levelnet.background.conditions import Conditions
+from levelnet.history.helium import COLDEST_K, Around, HeliumEquations, IonNetwork
+from levelnet.history.start import equilibrium_state, ion_lags, saha_state
+from levelnet.network.assembly import Workspace, factor_interior
+from levelnet.network.helium import helium_ladders, helium_rate_constants, reduce_helium
+from levelnet.network.helium_populations import helium_populations
+from levelnet.network.ladder import hydrogen_ladder
+from levelnet.network.populations import populations
+from levelnet.network.rates import assemble_rates
+from levelnet.network.reduced import ReducedRates
+from levelnet.network.tabulation import live_reduction
+from tests.small_helium import helium_equations
+
+_KEPT = ((2, 0, 0), (2, 1, 0), (2, 0, 1), (2, 1, 1))
+
+
+def s_of(redshift: float) -> float:
+    return -math.log1p(redshift)
+
+
+# ---- limits
+
+
+def hydrogenic_rates(temperature_k: float, n_max: int) -> ReducedRates:
+    ladders = helium_ladders(n_max, _KEPT, hydrogenic=True)
+    value = reduce_helium(ladders, temperature_k)
+    constants = helium_rate_constants(ladders)
+    return assemble_rates(constants, value, np.zeros_like(value), temperature_k, temperature_k)
+
+
+@pytest.mark.parametrize("temperature_k", [3000.0, 8000.0])
+def test_hydrogenic_limit_is_hydrogen(temperature_k: float) -> None:
+    """Closed form: without defects each spin is hydrogen; a quarter of recombination is singlet."""
+    n_max = 7
+    ladders = helium_ladders(n_max, _KEPT, hydrogenic=True)
+    place = {one: k for k, one in enumerate(_terms(ladders.kept))}
+    found = hydrogenic_rates(temperature_k, n_max)
+    hydrogen = live_reduction(hydrogen_ladder(n_max, "nonrelativistic", ((2, 0), (2, 1))))
+    wanted = hydrogen.rates(temperature_k, temperature_k)
+    for spin, share in ((0, 0.25), (1, 0.75)):
+        s, p = place[2, 0, spin], place[2, 1, spin]
+        np.testing.assert_allclose(
+            found.recombination[[s, p]], share * wanted.recombination, rtol=1e-9
+        )
+        np.testing.assert_allclose(
+            found.log_photoionization[[s, p]], wanted.log_photoionization, atol=1e-9
+        )
+        assert found.exchange[s, p] == pytest.approx(wanted.exchange[0, 1], rel=1e-9)
+        assert found.exchange[p, s] == pytest.approx(wanted.exchange[1, 0], rel=1e-9)
+    across = [found.exchange[place[a], place[b]] for a in _KEPT[:2] for b in _KEPT[2:]]
+    assert max(across) < 1e-250
+
+
+def _terms(kept: object) -> list[tuple[int, int, int]]:
+    return list(zip(kept.n.tolist(), kept.l.tolist(), kept.spin.tolist(), strict=True))  # type: ignore[attr-defined]
+
+
+@pytest.mark.parametrize("temperature_k", [6000.0, 16_000.0])
+def test_helium_ion_is_hydrogen_scaled(temperature_k: float) -> None:
+    """Closed form: energies as Z^2 mu, A as Z^4 mu, recombination as Z mu^-2 at T/(Z^2 mu)."""
+    kept, n_max = ((2, 0), (2, 1)), 8
+    mass = reduced_mass_ratio(2) / reduced_mass_ratio(1)
+    unit = ionization_scale_ev(2) / ionization_scale_ev(1)
+    assert unit == pytest.approx(4.0 * mass, rel=1e-14)
+    ion = live_reduction(hydrogen_ladder(n_max, "nonrelativistic", kept, charge=2))
+    atom = live_reduction(hydrogen_ladder(n_max, "nonrelativistic", kept))
+    found = ion.rates(temperature_k, 0.9 * temperature_k)
+    wanted = atom.rates(temperature_k / unit, 0.9 * temperature_k / unit)
+    np.testing.assert_allclose(
+        found.recombination, wanted.recombination * 2.0 / mass**2, rtol=1e-10
+    )
+    np.testing.assert_allclose(found.exchange, wanted.exchange * 16.0 * mass, rtol=1e-10)
+    shift = found.log_photoionization - wanted.log_photoionization
+    np.testing.assert_allclose(shift, math.log(16.0 * mass), atol=1e-10)
+
+
+# ---- equilibrium
+
+
+def saha_conditions(stage: int, temperature_k: float) -> Conditions:
+    """Both stages in Saha equilibrium, at a density and x_e as when that stage recombines."""
+    equations, _ = helium_equations()
+    assert equations.helium is not None
+    around = Around(temperature_k, temperature_k, 250.0, 1e-12, 13.0, -2.0)
+    ratio = equations.helium.saha_log_ratio(stage, around)
+    ion = 1.0 / (1.0 + math.exp(-ratio))
+    return IonNetwork.conditions(around, ion, ion * math.exp(-ratio))
+
+
+@pytest.mark.parametrize("temperature_k", [5000.0, 7000.0, 9000.0])
+def test_departures_of_neutral_helium_in_equilibrium(temperature_k: float) -> None:
+    """Law: in a blackbody at T_m = T_r every level is in Saha-Boltzmann equilibrium."""
+    _, atoms = helium_equations()
+    conditions = saha_conditions(0, temperature_k)
+    local = atoms.equations.first.solve(conditions)
+    levels = helium_populations(atoms.first, local.solution.log_population, conditions)
+    # The table interpolates exchange and capture, and takes their inverses from equilibrium.
+    assert np.abs(levels.log_departure).max() < 1e-12
+    assert levels.conservation_error < 1e-12
+
+
+@pytest.mark.parametrize("temperature_k", [12_000.0, 16_000.0, 20_000.0])
+def test_departures_of_the_helium_ion_in_equilibrium(temperature_k: float) -> None:
+    """Law: as for He I."""
+    _, atoms = helium_equations()
+    assert atoms.equations.second is not None
+    assert atoms.second is not None
+    conditions = saha_conditions(1, temperature_k)
+    local = atoms.equations.second.solve(conditions)
+    factored = factor_interior(atoms.second, temperature_k, Workspace.of(atoms.second))
+    levels = populations(factored, local.solution.log_population, conditions)
+    assert np.abs(levels.log_departure).max() < 1e-12
+
+
+def test_start_is_charge_neutral_saha_equilibrium() -> None:
+    """Closed form: three Saha equations and charge neutrality, solved by scipy elsewhere here."""
+    equations, _ = helium_equations()
+    for redshift in (8000.0, 6000.0, 2800.0):
+        state = saha_state(equations, s_of(redshift))
+        assert equations.helium is not None
+        around = equations.helium_around(s_of(redshift), state)
+        first, second = (equations.helium.saha_log_ratio(stage, around) for stage in (0, 1))
+        x = HeliumEquations.fractions(state[2:])
+        assert math.log(x.single / x.neutral) == pytest.approx(first, abs=1e-12)
+        assert math.log(x.double / x.single) == pytest.approx(second, abs=1e-12)
+
+
+def test_lag_at_the_start_follows_the_expansion() -> None:
+    """Law: on the lagging state every rate equals the drift of equilibrium, to second order."""
+    equations, _ = helium_equations()
+    s, step = s_of(6800.0), 1e-3
+    state, _ = equilibrium_state(equations, s)
+    later, before = (equilibrium_state(equations, s + d)[0] for d in (step, -step))
+    drift = (later - before) / (2.0 * step)
+    rate = equations.rate(s, state)
+    lag = ion_lags(equations, s)[2]
+    assert 1e-5 < abs(lag) < 1e-3
+    assert rate[3] == pytest.approx(drift[3], rel=10.0 * abs(lag))
+
+
+# ---- derivatives
+
+
+@pytest.mark.parametrize(
+    ("ion", "redshift", "shift"),
+    [
+        ("network", 6000.0, (0.01, -1e-4, 0.02, 0.03)),
+        ("network", 2400.0, (0.01, -1e-4, 0.02, 0.03)),
+        ("network", 2800.0, (0.01, -1e-4, 0.02, 0.0)),  # b = -42: fading into Saha equilibrium
+        ("saha", 1900.0, (0.01, -1e-4, 0.02, 0.03)),
+        ("saha", 518.0, (0.0, -1e-3, 0.0, 0.0)),  # rates fade above T_r = 1400 K
+    ],
+)
+def test_jacobian_against_differences(ion: str, redshift: float, shift: tuple[float, ...]) -> None:
+    equations, _ = helium_equations(ion)
+    s = s_of(redshift)
+    state = saha_state(equations, s) + np.array(shift)
+    if redshift < 1000.0:
+        state = np.array([-7.0, -0.01, -30.0, -400.0])
+    matrix, drift = equations.jacobian(s, state)
+    step, wanted = 1e-5, np.zeros((4, 4))
+    for k in range(4):
+        move = step * np.eye(4)[k]
+        wanted[:, k] = equations.rate(s, state + move) - equations.rate(s, state - move)
+    wanted /= 2.0 * step
+    by_time = (equations.rate(s + 1e-6, state) - equations.rate(s - 1e-6, state)) / 2e-6
+    scale = np.abs(wanted).max(axis=1, keepdims=True)
+    np.testing.assert_allclose(matrix / scale, wanted / scale, atol=2e-8)
+    np.testing.assert_allclose(drift, by_time, rtol=1e-6)
+
+
+def test_helium_stands_still_in_the_cold() -> None:
+    equations, _ = helium_equations()
+    redshift = 0.99 * COLDEST_K / 2.7255 - 1.0
+    rate = equations.rate(s_of(redshift), np.array([-7.0, -0.02, -40.0, -300.0]))
+    assert rate[0] != 0.0
+    assert (rate[2:] == 0.0).all()
+
+
+@pytest.mark.parametrize("place", range(4))
+@pytest.mark.parametrize("value", [1e3, -1e3, 1e300])
+def test_trial_far_off_is_no_error(place: int, value: float) -> None:
+    equations, _ = helium_equations()
+    state = saha_state(equations, s_of(2500.0))
+    state[place] = value
+    assert np.isnan(equations.rate(s_of(2500.0), state)).all()
+
+
+def test_lines_that_share_a_level_add_up() -> None:
+    """2 3P1 and 2 3P2 leave from one term; each must count."""
+    _, atoms = helium_equations()
+    network, conditions = atoms.equations.first, saha_conditions(0, 6500.0)
+    coupling = network.treatment.couple(network.lines, network.reduced.kept, conditions)
+    upper = network.lines.upper.tolist()
+    shared = upper[network.lines.names.index("2 3P1-1 1S")]
+    assert upper.count(shared) == 2
+    chance = coupling.validity["escape_probability"]
+    # Closed form: A P each; the photon occupation is exp(-38).
+    each = network.lines.einstein_a_per_s * chance
+    total = sum(each[k] for k in range(len(upper)) if upper[k] == shared)
+    assert coupling.loss[shared, shared] == pytest.approx(total, rel=1e-12)
+    # A third and five ninths of the term radiate: 177.6 s^-1 and 0.324 s^-1 (published).
+    rates = dict(zip(network.lines.names, network.lines.einstein_a_per_s, strict=True))
+    assert rates["2 3P1-1 1S"] == pytest.approx(177.6 / 3.0)
+    assert rates["2 3P2-1 1S"] == pytest.approx(0.324 * 5.0 / 9.0)
