@@ -346,8 +346,8 @@ class HeliumEquations:
         return {**figures, "log_blue_side": blue, "log_red_side": red}
 
     def remember(self, around: Around, state: FloatArray) -> None:
-        """Keep what an accepted step sends to lines below."""
-        if self.past is None:
+        """Keep what an accepted step sends to lines below, until helium is held."""
+        if self.past is None or around.radiation_temperature_k < COLDEST_K:
             return
         depth = continuum_depth(
             self.past.lines, around.neutral_hydrogen_cm3, around.hubble_rate_per_s

@@ -84,3 +84,15 @@ def test_figures_of_the_lines_hold_both_sides_of_the_field() -> None:
     assert figures["log_red_side"][3] > 1.0  # He I lags, 584 A is brighter than the blackbody
     # Hydrogen takes most of it on the way to 591 A.
     assert 0.0 < figures["log_blue_side"][2] < figures["log_red_side"][3]
+
+
+def test_nothing_is_remembered_once_helium_is_held() -> None:
+    # The tables of He I end at 1400 K, z = 513; histories go on.
+    equations = helium_equations(HeliumSobolevFeedback(), True)
+    assert equations.helium is not None
+    past = equations.helium.past
+    assert past is not None
+    state = saha_state(equations, 1000.0)
+    for redshift in (700.0, 500.0, 20.0):
+        equations.remember(-math.log1p(redshift), state)
+    assert past.red.time == [-math.log1p(700.0)]
