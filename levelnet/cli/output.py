@@ -11,6 +11,7 @@ from typing import TYPE_CHECKING, Any
 
 from ..constants import SECONDS_PER_YEAR
 from ..quantities import OBSERVABLES
+from .helium_output import helium_text, helium_values
 from .line_output import line_rows, line_values
 
 if TYPE_CHECKING:
@@ -151,6 +152,7 @@ def history_values(history: History) -> dict[str, Any]:
             zip(history.channels.names, history.channels.cumulative_share[-1], strict=True)
         ),
         "diagnostics": {name: getattr(how, name) for name in how.__slots__},
+        "helium": helium_values(history, rows),
         "field": field_values(history.field),
         "notes": list(history.notes),
     }
@@ -194,6 +196,8 @@ def summary_text(history: History) -> str:
         table = line_rows(history, sample_rows(history))
         body += ["", *aligned(table, right=True)]
     how = [*_diagnostic_lines(history), *_frequency_lines(history.diagnostics)]
+    if helium := helium_text(history):
+        how.append(row("helium", helium))
     return "\n".join([*head, *body, "", *how, *_field_lines(history.field), *_note_lines(history)])
 
 

@@ -55,7 +55,9 @@ def estimate(setup: Setup) -> Cost:
     copies = 2.0 if setup.rates.network else 1.0
     cubes = 8.0 * (copies * n**3 + (2.0 if top == n else 3.0) * top**3) / 3.0
     cubes += _BORDERS * 8.0 * border
-    populations = 5 * 8.0 * n_out * (top**2 / 2.0 + n - top)
+    # Of He I and He II: both spins, and half as many.
+    helium = 1.5 * setup.helium.n_max**2
+    populations = 5 * 8.0 * n_out * (top**2 / 2.0 + n - top + helium)
     memory = cubes + 400.0 * n**2 + populations + _RESERVE_BYTES
     low = setup.cosmology.cmb_temperature_k * (1.0 + setup.grid.redshift_end)
     nodes = node_count(low, 6000.0, table_tolerance(setup)) + 7 if setup.accuracy.interpolate else 0
