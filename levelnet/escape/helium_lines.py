@@ -110,7 +110,8 @@ def helium_ground_lines(
     """
     ground = ground_lines(ladders.levels, intercombination_rate_per_s)
     kept = ladders.kept_position.tolist()
-    use = [i for i, level in enumerate(ground.level.tolist()) if level in kept]
+    on = ground.rate_per_s > 0.0
+    use = [i for i, level in enumerate(ground.level.tolist()) if level in kept and on[i]]
     use.sort(key=lambda i: float(ground.energy_ev[i]))
     level, energy = ground.level[use], ground.energy_ev[use]
     n = ladders.levels.n[level]

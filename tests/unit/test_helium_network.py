@@ -9,6 +9,8 @@ import pytest
 
 from levelnet.atomic.levels import ionization_scale_ev, reduced_mass_ratio
 from levelnet.background.conditions import Conditions
+from levelnet.escape.helium_lines import HeliumGroundLines
+from levelnet.escape.helium_treatment import HeliumTreatment, Seen
 from levelnet.history.helium import COLDEST_K, Around, HeliumEquations, IonNetwork
 from levelnet.history.start import equilibrium_state, ion_lags, saha_state
 from levelnet.network.assembly import Workspace, factor_interior
@@ -102,7 +104,7 @@ def test_departures_of_neutral_helium_in_equilibrium(temperature_k: float) -> No
     """Law: in a blackbody at T_m = T_r every level is in Saha-Boltzmann equilibrium."""
     _, atoms = helium_equations()
     conditions = saha_conditions(0, temperature_k)
-    local = atoms.equations.first.solve(conditions)
+    local = atoms.equations.first.solve(conditions, Seen(0.0))
     levels = helium_populations(atoms.first, local.solution.log_population, conditions)
     # The table interpolates exchange and capture, and takes their inverses from equilibrium.
     assert np.abs(levels.log_departure).max() < 1e-12
@@ -200,7 +202,9 @@ def test_lines_that_share_a_level_add_up() -> None:
     """2 3P1 and 2 3P2 leave from one term; each must count."""
     _, atoms = helium_equations()
     network, conditions = atoms.equations.first, saha_conditions(0, 6500.0)
-    coupling = network.treatment.couple(network.lines, network.reduced.kept, conditions)
+    treatment, lines = network.treatment, network.lines
+    assert isinstance(treatment, HeliumTreatment) and isinstance(lines, HeliumGroundLines)
+    coupling = treatment.couple(lines, network.reduced.kept, conditions, Seen(0.0))
     upper = network.lines.upper.tolist()
     shared = upper[network.lines.names.index("2 3P1-1 1S")]
     assert upper.count(shared) == 2
