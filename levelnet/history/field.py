@@ -1,7 +1,7 @@
 """A run whose radiation field is resolved in frequency: one march of field, levels and ionization.
 
 The march itself needs no network (`history/march_path.py`). Helium is taken from the reference
-history: what the field does to hydrogen it feels through n_e alone.
+history: what the field does to hydrogen does not reach it.
 """
 
 from __future__ import annotations
