@@ -13,8 +13,6 @@ from ..numerics.stepping import Trajectory
 from .equations import SlowEquations
 from .start import Handover, equilibrium_state
 
-_SAME = 1e-9  # two times in ln a that differ by rounding alone
-
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Course:
@@ -41,8 +39,6 @@ def state_at(course: Course, log_scale: float) -> FloatArray:
         return equilibrium_state(course.equations, log_scale)[0]
     trajectory = course.trajectory
     nearest = int(np.argmin(np.abs(trajectory.time - log_scale)))
-    if abs(trajectory.time[nearest] - log_scale) > _SAME:
-        raise ValueError(f"ln a = {log_scale:g}: no point of the trajectory")
     state: FloatArray = trajectory.state[nearest]
     return state
 
