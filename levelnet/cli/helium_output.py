@@ -4,8 +4,6 @@ from __future__ import annotations
 
 from typing import TYPE_CHECKING, Any
 
-import numpy as np
-
 if TYPE_CHECKING:
     from ..arrays import IntArray
     from ..history.result import History
@@ -40,6 +38,8 @@ def helium_text(history: History) -> str:
     if how is None:
         return ""
     # NaN where the outputs do not reach it.
+    import numpy as np
+
     ends = {"left": np.nan, "right": np.nan}
     half = float(np.interp(0.5, history.neutral_helium_fraction, history.redshift, **ends))
     return (
