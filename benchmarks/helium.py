@@ -1,0 +1,83 @@
+"""How x_e hangs on the choices about helium, and what helium costs: figures of the README.
+
+    python -m benchmarks.helium
+
+Relative changes of x_e where they are largest between z = 1500 and 7000, hydrogen and helium to
+n_max = 10, Sobolev lines; then process time of whole histories, z = 8000 to 20 with populations at
+200 redshifts, against hydrogen alone. No cache of reductions; atomic data are at hand.
+"""
+
+from __future__ import annotations
+
+from benchmarks.timing import cpu_seconds, machine  # pins threads
+
+# isort: split
+from typing import Any
+
+import numpy as np
+
+from benchmarks.history import COSMOLOGY
+from levelnet.history.result import History
+from levelnet.history.run import solve
+from levelnet.history.setup import Setup
+
+REDSHIFTS = (8000.0, *np.arange(7000.0, 1499.0, -100.0).tolist())
+
+
+def history(helium: int = 10, higher: str = "closed", hydrogen: int = 10, **keys: Any) -> History:
+    """One run."""
+    with_levels = {"lines": {"helium_higher_lines": higher}} if helium else {}
+    return solve(
+        Setup(
+            cosmology=COSMOLOGY,
+            hydrogen={"n_max": hydrogen},
+            helium={"n_max": helium, **keys} if helium else {},
+            grid={"redshift_start": 8000.0, "redshift_end": 1500.0, "redshifts": REDSHIFTS},
+            **with_levels,
+        )
+    )
+
+
+def show(label: str, changed: History, usual: History) -> None:
+    """Print the largest change and where it is."""
+    change = changed.free_electron_fraction / usual.free_electron_fraction - 1.0
+    worst = int(np.argmax(np.abs(change)))
+    print(f"{label:32} z = {changed.redshift[worst]:5.0f}  {change[worst]:+.1e}")
+
+
+def main() -> None:
+    """Print everything."""
+    print(machine())
+    usual = history()
+    show("helium_ion = saha", history(helium_ion="saha"), usual)
+    for rate in (0.0, 176.4, 233.0):
+        show(
+            f"intercombination {rate:g} for 177.6",
+            history(intercombination_rate_per_s=rate),
+            usual,
+        )
+    show("two-photon rate of 2 1S +1 %", history(two_photon_rate_per_s=1.01 * 51.02), usual)
+    for n_max in (4, 15, 30):
+        show(f"n_max of helium {n_max} for 10", history(n_max), usual)
+    for n_max in (4, 10, 15):
+        show(f"higher lines free, n_max {n_max}", history(n_max, "free"), history(n_max))
+    alone = whole_seconds()
+    for lines in ("sobolev", "continuum"):
+        both = whole_seconds(helium={"n_max": 30}, lines={"helium": lines})
+        print(f"H 100, He 30, {lines}: {both:.1f} s, H alone {alone:.1f} s: {both / alone:.1f} x")
+
+
+def whole_seconds(**parts: Any) -> float:
+    """Process time of a whole history, the second time."""
+    setup = Setup(
+        cosmology=COSMOLOGY,
+        hydrogen={"n_max": 100},
+        grid={"redshift_start": 8000.0, "redshift_end": 20.0},
+        **parts,
+    )
+    solve(setup)
+    return cpu_seconds(lambda: solve(setup))
+
+
+if __name__ == "__main__":
+    main()
