@@ -93,13 +93,18 @@ def frequency_cells(
         edge,
         alpha_ev,
         step,
-        int(not (lines.transfer or Transfer()).feedback),
+        int(not _choice(lines).feedback),
     )
+
+
+def _choice(lines: Lines) -> Transfer:
+    assert lines.transfer is not None  # with `hydrogen = "transfer"` it always is there
+    return lines.transfer
 
 
 def _ways(level: tuple[int, int], lines: Lines) -> tuple[bool, bool]:
     """Whether a level decays by two photons through the field, and whether it scatters (Raman)."""
-    choice = lines.transfer or Transfer()
+    choice = _choice(lines)
     if level == (2, 0):
         return lines.two_photon == "distorted", choice.raman
     return choice.excited_two_photon, choice.raman and level in RAMAN_LEVELS
@@ -107,7 +112,7 @@ def _ways(level: tuple[int, int], lines: Lines) -> tuple[bool, bool]:
 
 def _scattering(lines: Lines, step: float, lowest: int) -> tuple[int, FloatArray]:
     """First cell with scattering and the conductances between them; nothing where it is off."""
-    if not (lines.transfer or Transfer()).scattering:
+    if not _choice(lines).scattering:
         return 0, np.zeros(1)
     reach = math.floor(_SCATTERING_REACH / step)
     low = np.arange(-reach, reach) * step
