@@ -1,0 +1,47 @@
+"""Escape from a line of He I with hydrogen absorbing inside it: the transfer equation itself, independent of `levelnet`.
+
+With h = (f_L - f)/(f_L - f_bb), f_L the occupation the line would settle at, f_bb that of the continuum, photons running down in
+y = ln nu and all coefficients constant across the line,
+
+    dh/dy = (tau phi(y) + tau_c) h - tau_c,   h = 1 far above the line,   P = int phi h dy,
+
+tau the Sobolev depth and tau_c = n_HI sigma c/H. Without continuum P = (1 - e^-tau)/tau.
+"""
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy.special import wofz
+
+Array = NDArray[np.float64]
+
+
+def line_grid(doppler: float, damping: float, points_per_decade: int = 160) -> Array:
+    """Cell edges in y - y_0: even in the Doppler core (six widths), even in ln|y| outside, to 0.2 where there is a wing."""
+    core = np.linspace(-6.0, 6.0, 1201) * doppler
+    if damping == 0.0:
+        return core
+    count = int(points_per_decade * np.log10(0.2 / core[-1]))
+    wing = np.geomspace(core[-1], 0.2, count)[1:]
+    return np.concatenate([-wing[::-1], core, wing])
+
+
+def line_escape(tau: float, tau_c: float, doppler: float, damping: float) -> float:
+    """P of one line; `doppler` = sqrt(2kT/m)/c, `damping` the width Gamma/(4 pi nu) in y that acts incoherently."""
+    edges = line_grid(doppler, damping)
+    width, middle = np.diff(edges), 0.5 * (edges[1:] + edges[:-1])
+    profile = wofz((middle + 1j * damping) / doppler).real / (np.sqrt(np.pi) * doppler)
+    profile /= np.sum(profile * width)
+    # Inside a cell the coefficients are constant: h = s + (h_in - s) e^{-(tau phi + tau_c) y}, exactly, with s = tau_c/(tau phi + tau_c).
+    depth = (tau * profile + tau_c) * width
+    settled = tau_c * width / depth
+    decay = np.exp(-depth)
+    mean = -np.expm1(-depth) / depth
+    h, total = 1.0, 0.0
+    for cell in range(width.size - 1, -1, -1):  # from the blue
+        total += profile[cell] * width[cell] * (settled[cell] + (h - settled[cell]) * mean[cell])
+        h = settled[cell] + (h - settled[cell]) * decay[cell]
+    return float(total)
+
+
+def sobolev_escape(tau: float) -> float:
+    return float(-np.expm1(-tau) / tau) if tau > 1e-8 else 1.0
