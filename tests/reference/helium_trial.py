@@ -5,7 +5,6 @@ between two departures from Saha equilibrium with the continuum, b = x/(S n_e x_
 levels are quasi-steady, recombination straight to the ground state is left out.
 """
 
-from collections.abc import Callable
 from dataclasses import dataclass, field
 
 import numpy as np
@@ -79,15 +78,20 @@ class Ladder:
         up = self.down[:, level] @ self.saha / self.saha[level]
         return float(self.down[level].sum() + up + self.ionization[level])
 
-    def effective(self, line_rates: dict[str, float]) -> tuple[float, Array]:
-        """(K, v) per n_e x_ion: net recombination K (1 - b_ground), b = 1 + (1 - v)(b_ground - 1); rates per whole level, s^-1."""
-        to_ground = np.zeros(self.saha.size)
+    def recombination(self, line_rates: dict[str, float], extra: dict[str, float], away: float) -> tuple[float, Array]:
+        """Net recombination per n_e x_ion and the b - 1 of all levels, from the ground's b - 1 = `away`.
+
+        `line_rates` per whole level and `extra`, absorption beyond that of a blackbody, in s^-1: the flow down a line is
+        S n_e x_ion [rate (b - b_ground) - extra b_ground].
+        """
+        to_ground, lit = np.zeros((2, self.saha.size))
         for line in self.atom.lines:
             to_ground[line.level] += line_rates[line.name] * self.saha[line.level]
+            lit[line.level] += extra.get(line.name, 0.0) * self.saha[line.level] * (1 + away)
         to_continuum = self.ionization * self.saha
         matrix = np.diag(self.conductance.sum(1) + to_ground + to_continuum) - self.conductance
-        share = np.linalg.solve(matrix, to_continuum)
-        return float(to_ground @ share), share
+        excess = np.linalg.solve(matrix, to_ground * away + lit)
+        return -float(to_continuum @ excess), excess
 
 
 @dataclass
@@ -101,13 +105,16 @@ class Trial:
     hydrogen_n_max: int = 10
     higher: str = "closed"
     wings: str | None = None
-    feedback: bool = False
+    reach: float = 0.2
+    feedback_rounds: int = 0
     intercombination: float = 177.6
     two_photon: float = 51.02
     two_photon_hydrogen: float = 8.2246
     photoionization_factor: dict[tuple[int, int, int], float] = field(default_factory=dict)
 
     def __post_init__(self) -> None:
+        self.sent: tuple[Array, Array] | None = None
+        self.log_hydrogen: tuple[Array, Array] = (np.zeros(1), np.zeros(1))
         self.hydrogen = hydrogenic(1, MASS_H - 9.1093837e-28, self.hydrogen_n_max, self.two_photon_hydrogen)
         self.helium = neutral_helium(self.n_max, self.intercombination, self.two_photon)
         for label, factor in self.photoionization_factor.items():
@@ -131,7 +138,7 @@ class Trial:
                 escape = sobolev_escape(depth)
                 if line.resonance_n > 2 and self.higher == "closed":
                     escape = 0.0
-                if ladder.atom is self.helium and self.wings and line.name in ("21P", "23P1"):
+                elif ladder.atom is self.helium and self.wings:
                     escape = self.escape_with_continuum(line, ladder, depth, x_hi, z)
             stimulated = 1 / -np.expm1(-line.energy / (K_B * temperature)) if line.thick else 1.0
             rates[line.name] = line.rate * line.share * escape * stimulated
@@ -142,10 +149,10 @@ class Trial:
         doppler = np.sqrt(2 * K_B * temperature / MASS_HE) / C
         others = ladder.other_exits(line.level)
         incoherent = {"doppler": 0.0, "complete": line.rate + others, "partial": others}[str(self.wings)]
-        if line.name == "23P1":
-            incoherent = 0.0  # its wing is far thinner than its core: tau ~ 1
+        if not line.resonance_n:
+            incoherent = 0.0  # tau ~ 1 at most: the wing is thin
         damping = incoherent * H_PLANCK / (4 * np.pi * line.energy)
-        return line_escape(depth, self.continuum_depth(line.energy, x_hi, z), float(doppler), damping)
+        return line_escape(depth, self.continuum_depth(line.energy, x_hi, z), float(doppler), damping, self.reach)
 
     def continuum_depth(self, energy: float, x_hi: float, z: float) -> float:
         """n_HI sigma c/H, per unit ln nu."""
@@ -174,10 +181,47 @@ class Trial:
         out = np.zeros(2)
         for slot, atom, bound, ion, total in ((0, self.hydrogen, x_hi, 1 - x_hi, 1.0), (1, self.helium, x_hei, x_heii, f)):
             ladder = Ladder(atom, temperature)
-            gain, _ = ladder.effective(self.line_rates(ladder, bound, x_hi, z))
-            away = np.expm1(np.log(bound / ion) - ladder.ground_log - np.log(n_e))  # b_ground - 1
-            out[slot] = -gain * n_e * ion * away * total / (bound * (total - bound)) / self.cosmology.hubble(z)
+            away = float(np.expm1(np.log(bound / ion) - ladder.ground_log - np.log(n_e)))
+            rates = self.line_rates(ladder, bound, x_hi, z)
+            extra = self.extra_absorption(ladder, bound, x_hi, z) if slot else {}
+            gain, _ = ladder.recombination(rates, extra, away)
+            out[slot] = gain * n_e * ion * total / (bound * (total - bound)) / self.cosmology.hubble(z)
         return out
+
+    def extra_absorption(self, ladder: Ladder, x_hei: float, x_hi: float, z: float) -> dict[str, float]:
+        """What 591 A absorbs of the photons that left 584 A earlier, hydrogen absorbing on the way."""
+        if self.sent is None:
+            return {}
+        line = next(line for line in self.helium.lines if line.name == "23P1")
+        ln_ratio = np.log(self.helium.lines[0].energy / line.energy)
+        past = np.log1p(z) + ln_ratio
+        excess = float(np.interp(past, *self.sent))
+        if self.wings:  # by the trapezium rule: n_HI changes by a fifth on the way
+            there = np.exp(past) - 1
+            energies = (self.helium.lines[0].energy, line.energy)
+            ends = [self.continuum_depth(e, x, at) for e, x, at in zip(energies, (self.neutral(past), x_hi), (there, z), strict=True)]
+            excess *= float(np.exp(-0.5 * (ends[0] + ends[1]) * ln_ratio))
+        temperature = self.cosmology.t0 * (1 + z)
+        escape = sobolev_escape(self.sobolev_depth(line, self.helium, x_hei, z))
+        stimulated = 1 / -np.expm1(-line.energy / (K_B * temperature))
+        return {"23P1": line.rate * line.share * escape * stimulated * excess}
+
+    def light(self, ln_z: Array, states: Array) -> None:
+        """Keep b(2 1P)/b(1 1S) - 1, the excess that 584 A sends on, of a finished history, and its hydrogen."""
+        excess = np.zeros(ln_z.size)
+        for k, state in enumerate(states):
+            z = float(np.expm1(ln_z[k]))
+            x_e, x_hi, x_hei, x_heii = self.charges(z, state)
+            ladder = Ladder(self.helium, self.cosmology.t0 * (1 + z))
+            away = float(np.expm1(np.log(x_hei / x_heii) - ladder.ground_log - np.log(x_e * self.cosmology.hydrogen_density(z))))
+            extra = self.extra_absorption(ladder, x_hei, x_hi, z)
+            _, above = ladder.recombination(self.line_rates(ladder, x_hei, x_hi, z), extra, away)
+            excess[k] = (above[self.helium.lines[0].level] - away) / (1 + away)
+        self.sent = (ln_z, excess)
+        self.log_hydrogen = (ln_z, states[:, 0])
+
+    def neutral(self, ln_z: float) -> float:
+        return float(1 / (1 + np.exp(-np.interp(ln_z, *self.log_hydrogen))))
 
     def solve(self, redshifts: Array, start: float = 4200.0, tolerance: float = 1e-7) -> dict[str, Array]:
         temperature = self.cosmology.t0 * (1 + start)
@@ -189,12 +233,15 @@ class Trial:
                 saha_log(a.reduced_mass, a.ground_weight / (2 * a.ion_weight), a.ground_binding, temperature) for a in (self.hydrogen, self.helium)
             ]
             state = np.array(logs) + np.log(n_e) + np.array([0.0, np.log1p(-x_iii)])
-        ln_a = -np.log1p(np.asarray(redshifts))
-        solution = solve_ivp(
-            self.slope, (-np.log1p(start), ln_a[-1]), state, method="Radau", t_eval=ln_a, rtol=tolerance, atol=tolerance
-        )
-        rows = [self.charges(z, column) for z, column in zip(redshifts, solution.y.T, strict=True)]
-        return dict(zip(("x_e", "x_HI", "x_HeI", "x_HeII"), np.array(rows).T, strict=True)) | {"evaluations": np.array(solution.nfev)}
-
-
-Progress = Callable[[str], None]
+        ln_z = np.log1p(np.asarray(redshifts))
+        fine = np.linspace(np.log1p(start), ln_z[-1], 400)
+        wanted = np.unique(np.concatenate([ln_z, fine]))[::-1]
+        for _ in range(1 + self.feedback_rounds):
+            solution = solve_ivp(
+                self.slope, (-wanted[0], -wanted[-1]), state, method="Radau", t_eval=-wanted, rtol=tolerance, atol=tolerance
+            )
+            if self.feedback_rounds:
+                self.light(wanted[::-1], solution.y.T[::-1])
+        at = np.searchsorted(-wanted, -ln_z)
+        rows = np.array([self.charges(z, column) for z, column in zip(redshifts, solution.y.T[at], strict=True)])
+        return dict(zip(("x_e", "x_HI", "x_HeI", "x_HeII"), rows.T, strict=True)) | {"evaluations": np.array(solution.nfev)}

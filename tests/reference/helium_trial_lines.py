@@ -15,19 +15,22 @@ from scipy.special import wofz
 Array = NDArray[np.float64]
 
 
-def line_grid(doppler: float, damping: float, points_per_decade: int = 160) -> Array:
-    """Cell edges in y - y_0: even in the Doppler core (six widths), even in ln|y| outside, to 0.2 where there is a wing."""
-    core = np.linspace(-6.0, 6.0, 1201) * doppler
+def line_grid(doppler: float, damping: float, reach: float) -> Array:
+    """Cell edges in y - y_0: even in the Doppler core (six widths), even in ln|y| in the wings, which end at `reach`."""
+    core = np.linspace(-6.0, 6.0, 801) * doppler
     if damping == 0.0:
         return core
-    count = int(points_per_decade * np.log10(0.2 / core[-1]))
-    wing = np.geomspace(core[-1], 0.2, count)[1:]
+    wing = np.geomspace(core[-1], reach, int(120 * np.log10(reach / core[-1])))[1:]
     return np.concatenate([-wing[::-1], core, wing])
 
 
-def line_escape(tau: float, tau_c: float, doppler: float, damping: float) -> float:
-    """P of one line; `doppler` = sqrt(2kT/m)/c, `damping` the width Gamma/(4 pi nu) in y that acts incoherently."""
-    edges = line_grid(doppler, damping)
+def line_escape(tau: float, tau_c: float, doppler: float, damping: float, reach: float = 0.2) -> float:
+    """P of one line; `doppler` = sqrt(2kT/m)/c, `damping` the width Gamma/(4 pi nu) in y that acts incoherently.
+
+    Beyond |y| = 0.2 other lines and edges lie. With the whole natural width the far wing of 584 A still counts there: a `reach` of
+    5 in place of 0.2 raises P by 20 per cent at z = 2500 and 2 per cent at 2000; for the incoherent part alone by 1e-3.
+    """
+    edges = line_grid(doppler, damping, reach)
     width, middle = np.diff(edges), 0.5 * (edges[1:] + edges[:-1])
     profile = wofz((middle + 1j * damping) / doppler).real / (np.sqrt(np.pi) * doppler)
     profile /= np.sum(profile * width)
