@@ -192,7 +192,7 @@ class Trial:
         return state
 
     def solve(
-        self, redshifts: Array, start: float = 4200.0, tolerance: float = 1e-7
+        self, redshifts: Array, start: float = 4200.0, tolerance: float = 1e-6
     ) -> dict[str, Array]:
         """Fractions at `redshifts`, descending; from Saha equilibrium at `start`."""
         ln_z = np.log1p(redshifts)
