@@ -18,10 +18,10 @@ from tests.reference.helium_trial.background import Array
 def line_grid(doppler: float, damping: float, reach: float) -> Array:
     """Cell edges in y - y_0: even in the Doppler core (six widths), even in ln|y| in the wings,
     which end at `reach`."""
-    core = np.linspace(-6.0, 6.0, 801) * doppler
+    core = np.linspace(-6.0, 6.0, 401) * doppler
     if damping == 0.0:
         return core
-    wing = np.geomspace(core[-1], reach, int(120 * np.log10(reach / core[-1])))[1:]
+    wing = np.geomspace(core[-1], reach, int(60 * np.log10(reach / core[-1])))[1:]
     return np.concatenate([-wing[::-1], core, wing])
 
 
