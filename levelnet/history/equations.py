@@ -253,7 +253,8 @@ class SlowEquations:
         rate = self._rate_of(here, state)
         if self.helium is None:
             return rate
-        return np.append(rate, self._helium_rates(log_scale, state).rate)
+        around = self.helium_around(log_scale, state)
+        return np.append(rate, self.helium.rate(around, state[2:]))
 
     def _rate_of(self, here: Local, state: FloatArray) -> FloatArray:
         c = here.conditions

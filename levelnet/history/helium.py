@@ -42,7 +42,7 @@ COLDEST_K = 1400.0
 # from the levels of He II, which would only ask for short steps.
 _PULL, _GONE, _FADING = 1e9, -50.0, -40.0
 # An ion whose share has this ln may be less exact, by a factor whose ln is at most the second.
-_RARE, _SLACK = math.log(1e-6), math.log(1e3)
+_RARE, _SLACK = math.log(1e-9), math.log(1e3)
 # From so far above COLDEST_K, in ln T_r, rates fade to nothing.
 _EBB = 0.05
 ION_WEIGHT = 2.0  # of He+ in its ground state
@@ -215,6 +215,12 @@ class IonNetwork:
             ground,
         )
 
+    def net_flow(
+        self, around: Around, ion: float, ground: float, seen: Seen | None = None
+    ) -> float:
+        """Net recombinations per nucleus and second."""
+        return self.solve(self.conditions(around, ion, ground), seen).solution.net_flow
+
     def flow(self, around: Around, ion: float, ground: float, seen: Seen | None = None) -> Flow:
         """Net recombinations and their derivatives."""
         conditions = self.conditions(around, ion, ground)
@@ -285,10 +291,31 @@ class HeliumEquations:
             neutral, charged * single_share, charged * double_share, charged, double_share
         )
 
+    def rate(self, around: Around, state: FloatArray) -> FloatArray:
+        """Rates of change at (a, b), shape (2,): those of `rates`, at half the price."""
+        x = self.fractions(state)
+        full, _ = _fading(around)
+        if full == 0.0:
+            return np.zeros(2)
+        seen = self._seen(around)
+        first = self.first.net_flow(around, x.single, x.neutral, seen)
+        by_first = -first / (around.hubble_rate_per_s * x.neutral * x.charged)
+        return full * np.array([by_first, self._upper_rate(around, x, float(state[1]), first)])
+
+    def _upper_rate(self, around: Around, x: HeliumFractions, b: float, first: float) -> float:
+        part, _ = _ramp((b - _GONE) / (_FADING - _GONE))
+        pulled = _PULL * (self.saha_log_ratio(1, around) - b)
+        if self.second is None or part == 0.0:
+            return pulled
+        second = self.second.net_flow(around, x.double, x.single)
+        inverse = 1.0 / x.double + 1.0 / x.single
+        levels = -(second * inverse - first / x.single) / around.hubble_rate_per_s
+        return part * levels + (1.0 - part) * pulled
+
     def rates(self, around: Around, state: FloatArray) -> Rates:
         """Rates of change and derivatives at (a, b)."""
         x = self.fractions(state)
-        full, slope = _ramp(math.log(around.radiation_temperature_k / COLDEST_K) / _EBB)
+        full, slope = _fading(around)
         if full == 0.0:
             return _stacked([0.0] * 7, [0.0] * 7)
         first = self.first.flow(around, x.single, x.neutral, self._seen(around))
@@ -335,7 +362,7 @@ class HeliumEquations:
     def slack(state: FloatArray) -> FloatArray:
         """By how much a and b may be less exact than u, for an ion that is hardly there.
 
-        1 while the rarer of two ions makes up a millionth of them, then as the inverse square root
+        1 while the rarer of two ions makes up a billionth of them, then as the inverse square root
         of its share, up to 1000.
         """
         log_share = -np.abs(state)
@@ -433,6 +460,11 @@ def _second_rates(around: Around, x: HeliumFractions, first: Flow, second: Flow)
 def _stacked(first: list[float], second: list[float]) -> Rates:
     rows = np.array([first, second])
     return Rates(rows[:, 0], rows[:, 1:3], rows[:, 3], rows[:, 4], rows[:, 5], rows[:, 6])
+
+
+def _fading(around: Around) -> tuple[float, float]:
+    """How much of the rates is left near COLDEST_K, and its slope by ln T_r times _EBB."""
+    return _ramp(math.log(around.radiation_temperature_k / COLDEST_K) / _EBB)
 
 
 def _ramp(x: float) -> tuple[float, float]:

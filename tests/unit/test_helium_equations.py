@@ -87,9 +87,23 @@ def test_figures_of_the_lines_hold_both_sides_of_the_field() -> None:
     assert 0.0 < figures["log_blue_side"][2] < figures["log_red_side"][3]
 
 
+@pytest.mark.parametrize("redshift", [3400.0, 2900.0, 1950.0, 520.0, 500.0])
+def test_rates_are_the_same_with_and_without_their_derivatives(redshift: float) -> None:
+    equations = helium_equations(HeliumContinuum("partial"), True)
+    helium = equations.helium
+    assert helium is not None
+    # He II by its levels at z = 3400, by both at 2900; fading at z = 520, held at 500.
+    lagging = np.array([0.01, -1e-6, 0.5, 0.1])
+    state = saha_state(equations, max(redshift, 1000.0)) + lagging
+    around = equations.helium_around(-math.log1p(redshift), state)
+    rate = helium.rate(around, state[2:])
+    np.testing.assert_allclose(rate, helium.rates(around, state[2:]).rate, rtol=1e-13, atol=0)
+    assert np.all(rate == 0.0) == (redshift == 500.0)
+
+
 def test_a_rare_ion_may_be_less_exact_within_bounds() -> None:
-    half, millionth, rarer, gone = 0.0, math.log(1e6), math.log(1e10), 400.0
-    slack = [HeliumEquations.slack(np.array([a, -a])) for a in (half, millionth, rarer, gone)]
+    half, billionth, rarer, gone = 0.0, math.log(1e9), math.log(1e13), 400.0
+    slack = [HeliumEquations.slack(np.array([a, -a])) for a in (half, billionth, rarer, gone)]
     np.testing.assert_allclose(slack, np.outer([1.0, 1.0, 100.0, 1000.0], [1.0, 1.0]), rtol=1e-12)
 
 
