@@ -9,7 +9,8 @@ HeII per helium nucleus and second, and y = 1 - x_HeI,
 
 Where the second ionization is in Saha equilibrium, b is pulled to its value there so fast that it
 stays within 1e-7 of it; so it is in any case once x_HeIII is below 4e-18 of x_HeII, where the
-levels of He II keep it 3e-3 (relative) above Saha equilibrium. Below T_r = 1400 K both stand still.
+levels of He II keep it 3e-3 (relative) above Saha equilibrium. Below T_r = 1400 K (in units of the
+atom's energies, where constants are changed) both stand still.
 """
 
 from __future__ import annotations
@@ -23,6 +24,7 @@ import numpy as np
 from .. import constants as const
 from ..arrays import FloatArray
 from ..atomic.detailed_balance import log_saha_factor
+from ..atomic.physics import UNCHANGED, Scales
 from ..background.conditions import Conditions
 from ..escape.blue_side import log_red_side
 from ..escape.helium_continuum import continuum_depth
@@ -33,6 +35,7 @@ from ..network.coupling import GroundCoupling, with_decay
 from ..network.gradient import FlowGradient, flow_slopes, net_flow_gradient
 from ..network.reduced import Reduced
 from ..network.solve import log_boltzmann_populations, solve_kept
+from ..numerics.chebyshev import ChebyshevSeries
 from .local import Local
 
 COLDEST_K = 1400.0
@@ -166,7 +169,9 @@ class IonNetwork:
     decay : int
         Position of the kept level that decays by two photons.
     decay_rate_per_s : float, s^-1
-        Its rate.
+        Its spontaneous rate.
+    stimulation : ChebyshevSeries or None
+        Ln of the factor by which the blackbody speeds it up, over ln T_r; None: not at all.
     """
 
     reduced: Reduced
@@ -174,6 +179,7 @@ class IonNetwork:
     treatment: LineTreatment | HeliumTreatment
     decay: int
     decay_rate_per_s: float
+    stimulation: ChebyshevSeries | None = None
 
     def solve(self, conditions: Conditions, seen: Seen | None = None) -> Local:
         """Kept levels at these conditions; densities and fractions are those of the element.
@@ -198,7 +204,13 @@ class IonNetwork:
             kept, conditions.radiation_temperature_k, conditions.ground_fraction
         )
         here = math.exp(float(log_boltzmann[self.decay]))
-        return with_decay(lines, self.decay, self.decay_rate_per_s, 0.0, here)
+        rate, slope = self.decay_rate_per_s, 0.0
+        if self.stimulation is not None:
+            log_factor, found = self.stimulation.evaluate(
+                math.log(conditions.radiation_temperature_k)
+            )
+            rate, slope = rate * math.exp(float(log_factor[0])), float(found[0])
+        return with_decay(lines, self.decay, rate, slope, here)
 
     @staticmethod
     def conditions(around: Around, ion: float, ground: float) -> Conditions:
@@ -267,12 +279,20 @@ class HeliumEquations:
         Of He I and of He II, each from its ground state.
     past : HeliumPast or None
         What the run remembers of the lines of He I, where one lights another (`lines.fed`).
+    scales : Scales
+        What changed constants do to helium; all above holds it already.
     """
 
     first: IonNetwork
     second: IonNetwork | None
     ionization_ev: tuple[float, float]
     past: HeliumPast | None = None
+    scales: Scales = UNCHANGED
+
+    @property
+    def coldest_k(self) -> float:
+        """T_r below which helium is held, K."""
+        return COLDEST_K * self.scales.energy
 
     @staticmethod
     def fractions(state: FloatArray) -> HeliumFractions:
@@ -286,7 +306,7 @@ class HeliumEquations:
     def rates(self, around: Around, state: FloatArray) -> Rates:
         """Rates of change and derivatives at (a, b)."""
         x = self.fractions(state)
-        full, slope = _ramp(math.log(around.radiation_temperature_k / COLDEST_K) / _EBB)
+        full, slope = _ramp(math.log(around.radiation_temperature_k / self.coldest_k) / _EBB)
         if full == 0.0:
             return _stacked([0.0] * 7, [0.0] * 7)
         first = self.first.flow(around, x.single, x.neutral, self._seen(around))
@@ -347,7 +367,7 @@ class HeliumEquations:
 
     def remember(self, around: Around, state: FloatArray) -> None:
         """Keep what an accepted step sends to lines below, until helium is held."""
-        if self.past is None or around.radiation_temperature_k < COLDEST_K:
+        if self.past is None or around.radiation_temperature_k < self.coldest_k:
             return
         depth = continuum_depth(
             self.past.lines, around.neutral_hydrogen_cm3, around.hubble_rate_per_s
@@ -389,7 +409,8 @@ class HeliumEquations:
         log_factor = log_saha_factor(
             weight, self.ionization_ev[stage], around.matter_temperature_k, charge=2
         )
-        return -float(log_factor) - math.log(electrons_cm3)
+        # The thermal volume goes as the reduced mass to -3/2.
+        return -float(log_factor) - math.log(electrons_cm3 * self.scales.reduced_mass**-1.5)
 
 
 def _second_rates(around: Around, x: HeliumFractions, first: Flow, second: Flow) -> list[float]:

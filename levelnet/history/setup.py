@@ -151,7 +151,7 @@ class Setup:
         self._check_helium()
 
     def _check_helium(self) -> None:
-        """Refuse treatments of lines that are not there, and what helium's levels do not know."""
+        """Refuse treatments of lines that are not there."""
         if self.helium.n_max == 0:
             for name in ("helium", "helium_higher_lines"):
                 if getattr(self.lines, name) is not None:
@@ -159,11 +159,6 @@ class Setup:
                         f"lines.{name}: helium is inert with helium.n_max = 0 and has no lines; "
                         "allowed from helium.n_max = 2"
                     )
-        elif self.physics != Physics():
-            raise ValueError(
-                "physics: changed constants are not known for the levels of helium; allowed with "
-                "helium.n_max = 0"
-            )
 
     def _check_feedback(self) -> None:
         """Refuse feedback among so many lines that steps shorter than its delays take for ever."""
