@@ -14,6 +14,9 @@ _NOTED = 20
 
 
 def _of_helium(setup: Setup) -> list[str]:
+    if setup.cosmology.helium_ratio() == 0.0:
+        levels = setup.helium.n_max > 0
+        return ["there is no helium" + ": [helium] and its lines change nothing" * levels]
     if not setup.helium_recombines:
         return [
             "helium is neutral and inert: x_e misses its electrons above z ~ 1600, where they count"

@@ -159,6 +159,12 @@ class Setup:
                         f"lines.{name}: helium is inert with helium.n_max = 0 and has no lines; "
                         "allowed from helium.n_max = 2"
                     )
+        elif self.helium.n_max == 2 and self.lines.helium_higher_lines in {"free", "feedback"}:
+            raise ValueError(
+                f'lines.helium_higher_lines = "{self.lines.helium_higher_lines}": with '
+                "helium.n_max = 2 there is no line n 1P -> 1 1S with n >= 3; allowed from "
+                "helium.n_max = 3"
+            )
 
     def _check_feedback(self) -> None:
         """Refuse feedback among so many lines that steps shorter than its delays take for ever."""

@@ -273,6 +273,8 @@ def test_no_helium_in_the_universe_is_hydrogen_alone() -> None:
         solve(Setup(bare, {"n_max": 4}, {"n_max": n}, grid=grid)) for n in (4, 0)
     )
     assert with_levels.helium is None
+    assert with_levels.notes[0] == "there is no helium: [helium] and its lines change nothing"
+    assert without.notes[0] == "there is no helium"
     assert with_levels.free_electron_fraction.tobytes() == without.free_electron_fraction.tobytes()
 
 
@@ -293,6 +295,14 @@ def test_no_helium_in_the_universe_is_hydrogen_alone() -> None:
         (
             {"lines": {"helium_continuum": {"feedback": True}}},
             'helium_continuum: only with helium = "continuum"',
+        ),
+        (
+            {"helium": {"n_max": 2}, "lines": {"helium_higher_lines": "feedback"}},
+            'helium_higher_lines = "feedback": with helium.n_max = 2 there is no line',
+        ),
+        (
+            {"helium": {"n_max": 2}, "lines": {"helium_higher_lines": "free"}},
+            'helium_higher_lines = "free": with helium.n_max = 2 .* allowed from helium.n_max = 3',
         ),
         ({"helium": {"two_photon_rate_per_s": -1.0}}, "two_photon_rate_per_s = -1.0"),
         ({"helium": {"intercombination_rate_per_s": math.nan}}, "intercombination_rate_per_s"),
