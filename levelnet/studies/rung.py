@@ -30,6 +30,7 @@ from ..history.setup import Setup
 from ..network.assembly import Workspace
 from ..numerics.threads import one_blas_thread
 from ..pieces import Pieces
+from .helium_ladder import Atom, with_n_max
 
 LOW_N = 4
 """Levels up to this n have their populations recorded."""
@@ -93,8 +94,17 @@ def study_setup(setup: Setup, also: Iterable[float] = ()) -> Setup:
     return dataclasses.replace(setup, grid=dataclasses.replace(setup.grid, redshifts=grid))
 
 
-def rung_setup(setup: Setup, n_max: int, resolve_l_to: int | None, relative: float) -> Setup:
+def rung_setup(
+    setup: Setup,
+    n_max: int,
+    resolve_l_to: int | None,
+    relative: float,
+    atom: Atom = "hydrogen",
+) -> Setup:
     """The setup of one rung; where `resolve_l_to` is None every level is resolved in l."""
+    if atom == "helium":
+        accuracy = dataclasses.replace(setup.accuracy, relative=relative)
+        return dataclasses.replace(with_n_max(setup, n_max), accuracy=accuracy)
     return dataclasses.replace(
         setup,
         hydrogen=dataclasses.replace(setup.hydrogen, n_max=n_max, resolve_l_to=resolve_l_to),
@@ -131,6 +141,8 @@ def compute_rung(
         if not integrated.trajectory.outcome.ok:
             outcome = integrated.trajectory.outcome
             text = f"rung n_max = {setup.hydrogen.n_max}: {outcome.value}"
+            if setup.helium_recombines:
+                text = f"helium n_max = {setup.helium.n_max}, {text}"
             raise SolveError(text, outcome=outcome)
         redshift = integrated.redshift
         times = (-np.log1p(redshift)).tolist()
