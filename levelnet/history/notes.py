@@ -39,6 +39,8 @@ def _of_helium(setup: Setup) -> list[str]:
             "helium lines n 1P-1 1S with n >= 3, each on its own: every further n adds escape, so "
             "that x_e does not converge with helium.n_max"
         )
+    if not setup.accuracy.interpolate:
+        notes.append("helium is interpolated in T_r though accuracy.interpolate is false")
     if setup.lines.two_photon != "spontaneous":
         notes.append(
             "helium: two-photon decay of 2 1S and of 2s of He II stimulated by the blackbody, "

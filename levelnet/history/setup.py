@@ -82,7 +82,8 @@ class Accuracy:
         Limit on the number of steps.
     interpolate : bool
         True: reduce the network at Chebyshev nodes in ln T_r and interpolate. False: reduce it at
-        every evaluation (slow; for checking).
+        every evaluation (slow; for checking). Helium is interpolated either way; its error is
+        among the figures of the history.
     """
 
     relative: Annotated[float, Field(ge=1e-9, le=1e-3)] = 1e-6
