@@ -230,8 +230,8 @@ class LevelStudy:
     @property
     def atom(self) -> Atom:
         """Whose n_max makes the rungs; on those of helium hydrogen stays as it is."""
-        same = np.array_equal(self.rungs.n_max, self.rungs.resolve_l_to)
-        return "hydrogen" if same else "helium"
+        fixed = len(set(self.rungs.resolve_l_to.tolist())) == 1
+        return "helium" if fixed else "hydrogen"
 
     @property
     def notes(self) -> tuple[str, ...]:

@@ -17,8 +17,13 @@ from levelnet.atomic.levels import (
 )
 from levelnet.background.conditions import Conditions
 from levelnet.errors import InputError
-from levelnet.escape.helium_lines import HeliumGroundLines
-from levelnet.escape.helium_treatment import HeliumTreatment, Seen
+from levelnet.escape.helium_lines import (
+    HeliumGroundLines,
+    HigherLines,
+    helium_ground_lines,
+    kept_terms,
+)
+from levelnet.escape.helium_treatment import HeliumSobolev, HeliumTreatment, Seen
 from levelnet.history.helium import COLDEST_K, Around, HeliumEquations, IonNetwork
 from levelnet.history.start import equilibrium_state, ion_lags, saha_state
 from levelnet.network.assembly import Workspace, factor_interior
@@ -28,6 +33,7 @@ from levelnet.network.ladder import hydrogen_ladder
 from levelnet.network.populations import populations
 from levelnet.network.rates import assemble_rates
 from levelnet.network.reduced import ReducedRates
+from levelnet.network.solve import solve_kept
 from levelnet.network.tabulation import live_reduction
 from tests.small_helium import helium_equations
 
@@ -152,6 +158,22 @@ def test_departures_of_neutral_helium_in_equilibrium(temperature_k: float) -> No
     # The table interpolates exchange and capture, and takes their inverses from equilibrium.
     assert np.abs(levels.log_departure).max() < 1e-12
     assert levels.conservation_error < 1e-12
+
+
+@pytest.mark.parametrize("higher", ["closed", "free"])
+def test_departures_with_many_levels(higher: HigherLines) -> None:
+    """Law: the same at n_max = 30, reduced at this T_r itself, whichever lines are open."""
+    temperature_k, n_max = 6000.0, 30
+    ladders = helium_ladders(n_max, kept_terms(n_max, higher))
+    value, constants = reduce_helium(ladders, temperature_k), helium_rate_constants(ladders)
+    rates = assemble_rates(constants, value, np.zeros_like(value), temperature_k, temperature_k)
+    conditions = saha_conditions(0, temperature_k)
+    lines = helium_ground_lines(ladders, False, higher)
+    coupling = HeliumSobolev().couple(lines, ladders.kept, conditions, Seen(0.0))
+    solution = solve_kept(ladders.kept, rates, coupling, conditions)
+    levels = helium_populations(ladders, solution.log_population, conditions)
+    assert len(levels.log_departure) == n_max * (n_max + 1) - 1
+    assert np.abs(levels.log_departure).max() < 1e-12
 
 
 @pytest.mark.parametrize("temperature_k", [12_000.0, 16_000.0, 20_000.0])
