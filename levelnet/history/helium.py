@@ -204,13 +204,15 @@ class IonNetwork:
             kept, conditions.radiation_temperature_k, conditions.ground_fraction
         )
         here = math.exp(float(log_boltzmann[self.decay]))
-        rate, slope = self.decay_rate_per_s, 0.0
-        if self.stimulation is not None:
-            log_factor, found = self.stimulation.evaluate(
-                math.log(conditions.radiation_temperature_k)
-            )
-            rate, slope = rate * math.exp(float(log_factor[0])), float(found[0])
+        rate, slope = self.decay_at(conditions.radiation_temperature_k)
         return with_decay(lines, self.decay, rate, slope, here)
+
+    def decay_at(self, radiation_temperature_k: float) -> tuple[float, float]:
+        """Rate of the two-photon decay at T_r, s^-1, and its d ln/d ln T_r."""
+        if self.stimulation is None:
+            return self.decay_rate_per_s, 0.0
+        value, slope = self.stimulation.evaluate(math.log(radiation_temperature_k))
+        return self.decay_rate_per_s * math.exp(float(value[0])), float(slope[0])
 
     @staticmethod
     def conditions(around: Around, ion: float, ground: float) -> Conditions:
