@@ -19,6 +19,7 @@ from typing import NamedTuple
 import numpy as np
 
 from ..arrays import FloatArray
+from ..atomic.physics import scales
 from ..background.last_scattering import Observed, ionized_redshift, observe
 from ..background.quadrature import quadrature
 from ..errors import Outcome, SolveError
@@ -189,14 +190,22 @@ def integrate_observed(
     setup: Setup, pieces: Pieces | None, keeps: tuple[tuple[int, int], ...] = ()
 ) -> Integrated:
     """Integrate from where observables start, or know the network from there."""
-    start = ionized_redshift(setup.cosmology, setup.helium_recombines)
+    start = _ionized_redshift(setup)
     return integrate_history(setup, lambda *_: None, pieces, keeps=keeps, start_above=start)
+
+
+def _ionized_redshift(setup: Setup) -> float:
+    """Redshift from which integrals start: with helium, where its own energies say so."""
+    found = ionized_redshift(setup.cosmology, setup.helium_recombines)
+    if not setup.helium_recombines:
+        return found
+    return (1.0 + found) * scales(setup.physics, charge=2).energy - 1.0
 
 
 def observed(setup: Setup, integrated: Integrated, optical_depth_to: tuple[float, ...]) -> Observed:
     """What an observer makes of the history, in equilibrium above its start."""
     redshift = integrated.redshift
-    ionized = ionized_redshift(setup.cosmology, setup.helium_recombines)
+    ionized = _ionized_redshift(setup)
     start = max(ionized, integrated.handover.redshift, float(redshift[0]))
     ends = -math.log1p(start), -math.log1p(float(redshift[-1]))
     grid = quadrature(setup.cosmology, *ends)

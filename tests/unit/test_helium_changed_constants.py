@@ -32,6 +32,7 @@ from levelnet.network.helium_populations import helium_populations
 from levelnet.network.populations import populations
 from levelnet.network.scaled import as_measured
 from levelnet.pieces import MemoryPieces
+from levelnet.studies.rung import observables_of
 from tests.small_helium import helium_history, helium_setup
 from tests.small_helium_lines import small_ladders
 from tests.tolerances import EQUILIBRIUM, ROUND_OFF
@@ -261,6 +262,19 @@ def test_stimulated_decay_changes_little_while_helium_recombines() -> None:
     helium = (plain.redshift >= 1800.0) & (plain.redshift <= 3500.0)
     assert -5e-5 < change[helium].min() < -1e-5
     assert any("stimulated by the blackbody" in note for note in fast.notes)
+
+
+def test_observables_start_where_changed_helium_is_ionized() -> None:
+    """Lowest energies: a start at fixed T_r would lie above what helium is tabulated for.
+
+    Law: alpha and m so that energies halve, recombination moves to half the redshift or so.
+    """
+    grid = {"redshift_start": 1800.0, "redshift_end": 20.0, "n_redshifts": 20}
+    physics = {"fine_structure_change": -0.2, "electron_mass_change": -0.2}
+    setup = helium_setup(4, 1e-5, grid=grid, physics=physics, helium={"helium_ion": "saha"})
+    found = observables_of(setup)
+    place = found.value[found.names.index("last_scattering_redshift")]
+    assert 0.4 * 1082.0 < place < 0.6 * 1082.0
 
 
 def test_history_with_changed_constants() -> None:
