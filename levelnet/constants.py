@@ -58,3 +58,10 @@ HYDROGEN_IONIZATION_PER_CM = 109678.77174307
 # Lamb shift of the hydrogen 1s level, 8172.8 MHz (from memory; scaled as n^-3 for the ns levels,
 # which reproduces the measured 2s level to 0.001 cm^-1).
 HYDROGEN_1S_LAMB_SHIFT_HZ = 8.1728e9
+
+# Measured ionization energy of He II, 438908.8789 cm^-1 or 54.417765 eV (NIST Atomic Spectra
+# Database, from memory).
+HELIUM_ION_IONIZATION_PER_CM = 438908.8789
+# Interval 2s-2p1/2 of He II, 14041.1 MHz (van Wijngaarden, Holuj & Drake 2000, Phys. Rev. A 63,
+# 012505; from memory), taken as the Lamb shift of 2s and, as n^-3, of every ns from it.
+HELIUM_ION_2S_LAMB_SHIFT_HZ = 1.40411e10

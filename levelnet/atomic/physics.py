@@ -51,12 +51,16 @@ class Scales:
         a^2 m_e^-2, of the Thomson cross section.
     reduced_mass : float
         m.
+    fine_structure : float
+        a.
 
     Notes
     -----
     A unit of length is 1/(a m), of energy a^2 m, of time 1/(a^2 m); an electric dipole rate has a^3
     more, the two-photon rate a^6. The fine structure of the levels, 1e-5 of the energies, is scaled
-    like the rest, so that the whole network follows exactly.
+    like the rest, so that the whole network follows exactly. So it does for helium: its quantum
+    defects are those of charges that attract and repel, pure numbers; what relativity and the
+    motion of the nucleus (m_e/M) add to its energies, 1e-4 of them, is scaled like the rest.
 
     References
     ----------
@@ -71,6 +75,37 @@ class Scales:
     compton_rate: float = 1.0
     thomson: float = 1.0
     reduced_mass: float = 1.0
+    fine_structure: float = 1.0
+
+    def line_to_ground(self, kind: str) -> float:
+        """Factor on the rate of a line of He I to its ground state, to leading order in alpha.
+
+        Parameters
+        ----------
+        kind : str
+            As in :class:`levelnet.atomic.helium_ground.GroundLines`.
+
+        Notes
+        -----
+        Over an electric dipole rate, a^5 m: a^4 for the intercombination line, whose amplitude is
+        the mixing of 2 1P into 2 3P1 by the spin-orbit interaction (energy a^4 m over a gap a^2 m);
+        a^4 for the magnetic quadrupole, where a magnetic moment takes the place of the electric one
+        (a in the amplitude) and the size of the atom over the wavelength comes in once more (a);
+        a^6 for the magnetic dipole, which vanishes without relativity (a^2 in the amplitude, beside
+        a for the moment).
+
+        References
+        ----------
+        Drake 1971, Phys. Rev. A 3, 908 (magnetic dipole); Drake 1969, Astrophys. J. 158, 1199
+        (magnetic quadrupole); Drake & Dalgarno 1969, Astrophys. J. 157, 459 (intercombination).
+        All from memory; the powers are counted here.
+        """
+        return self.line_rate * self.fine_structure ** _BEYOND_DIPOLE[kind]
+
+    @property
+    def cross_section(self) -> float:
+        """a^-1 m^-2, of photoionization cross sections at energies that scale too."""
+        return self.recombination / self.fine_structure**3
 
     @property
     def density(self) -> float:
@@ -79,13 +114,29 @@ class Scales:
 
 
 UNCHANGED = Scales()
+# Powers of alpha by which lines to the ground state of He I differ from an electric dipole.
+_BEYOND_DIPOLE = {
+    "resonance": 0,
+    "intercombination": 4,
+    "magnetic quadrupole": 4,
+    "magnetic dipole": 6,
+}
 
 
-def scales(physics: Physics) -> Scales:
-    """Factors that follow from changed constants; all exactly 1 where nothing is changed."""
+def scales(physics: Physics, charge: int = 1) -> Scales:
+    """Factors that follow from changed constants; all exactly 1 where nothing is changed.
+
+    Parameters
+    ----------
+    physics : Physics
+        The changes.
+    charge : int, 1 or 2
+        Nuclear charge: 1 hydrogen, 2 helium, atom and ion; it sets the mass of the nucleus alone.
+    """
     a = 1.0 + physics.fine_structure_change
     electron = 1.0 + physics.electron_mass_change
-    ratio = const.ELECTRON_PROTON_MASS_RATIO
+    heavy = 1.0 / const.ALPHA_ELECTRON_MASS_RATIO
+    ratio = const.ELECTRON_PROTON_MASS_RATIO if charge == 1 else heavy
     m = electron * ((1.0 + ratio) / (1.0 + ratio * electron))
     return Scales(
         a**2 * m,
@@ -95,4 +146,5 @@ def scales(physics: Physics) -> Scales:
         a**2 / electron**3,
         a**2 / electron**2,
         m,
+        a,
     )

@@ -35,7 +35,9 @@ class Hydrogen:
     energies : "measured" or "nonrelativistic"
         Level energies: fine-structure centroids with the measured ionization energy 13.598434 eV,
         or
-        -chi/n^2 with chi = 13.59829 eV. The choice is worth about 1.5e-4 in x_e.
+        -chi/n^2 with chi = 13.59829 eV. The choice is worth about 1.5e-4 in x_e. It holds for He II
+        too (54.417765 eV), where it is worth 4e-5; levels of He I are measured or follow from
+        measured ones.
     resolve_l_to : int, 2 to n_max, optional (dimensionless)
         Highest n with levels resolved in l. Each n above it is one whole shell: its levels are
         populated by statistical weight, its rates are exact averages over l. Not set: n_max.

@@ -14,6 +14,8 @@ if TYPE_CHECKING:
     from ..studies.level_requirement import Demands
     from ..studies.verdict import Verdict
 
+_HELIUM_SAMPLES = (3000.0, 2500.0, 2300.0, 2200.0, 2100.0, 2000.0, 1900.0, 1800.0, 1700.0, 1600.0)
+
 
 def level_values(study: LevelStudy, found: Verdict, met: Demands | None = None) -> dict[str, Any]:
     """Collect a study, whole, with its verdict on x_e and, where asked, on a requirement."""
@@ -25,6 +27,7 @@ def level_values(study: LevelStudy, found: Verdict, met: Demands | None = None) 
     return {
         "title": study.setup.title,
         "setup_digest": study.setup.digest,
+        "atom": study.atom,
         "outcome": study.outcome.name,
         "ok": study.outcome.ok,
         "rungs": {
@@ -47,13 +50,13 @@ def level_values(study: LevelStudy, found: Verdict, met: Demands | None = None) 
         "resolved": None if study.resolved is None else _resolved_values(study, found),
         "verdict": {
             **dataclasses.asdict(found),
-            "text": verdict_text(found, int(rungs.n_max[-1])),
+            "text": verdict_text(found, int(rungs.n_max[-1]), study.atom),
         },
         "requirement": None
         if met is None
         else {
             **dataclasses.asdict(met),
-            "text": demands_text(met, int(rungs.n_max[-1])),
+            "text": demands_text(met, int(rungs.n_max[-1]), study.atom),
         },
         "notes": study.notes,
     }
@@ -74,12 +77,12 @@ def level_summary(study: LevelStudy, found: Verdict, met: Demands | None = None)
     """Return the summary of a study as lines of plain text."""
     from ..studies.level_checks import resolved_text
     from ..studies.level_requirement import demands_text
-    from ..studies.verdict import verdict_text
+    from ..studies.verdict import n_max_name, verdict_text
 
     rungs = ", ".join(str(n) for n in study.rungs.n_max.tolist())
     head = [
         study.setup.title or "(no title)",
-        row("levels", f"setup {study.setup.digest}: n_max = {rungs}"),
+        row("levels", f"setup {study.setup.digest}: {n_max_name(study.atom)} = {rungs}"),
         row("outcome", study.outcome.value),
         "",
         *_rung_lines(study, found),
@@ -89,13 +92,13 @@ def level_summary(study: LevelStudy, found: Verdict, met: Demands | None = None)
         *_observable_lines(study),
         "",
     ]
-    body = [row("verdict", verdict_text(found, int(study.rungs.n_max[-1])))]
+    body = [row("verdict", verdict_text(found, int(study.rungs.n_max[-1]), study.atom))]
     if study.resolved is not None:
         head += [*_resolved_lines(study, found), ""]
         body.append(row("verdict", resolved_text(study, found.within, found.low, found.high)))
     if met is not None:
         head += [*_demand_lines(study, met), ""]
-        body.append(row("verdict", demands_text(met, int(study.rungs.n_max[-1]))))
+        body.append(row("verdict", demands_text(met, int(study.rungs.n_max[-1]), study.atom)))
     return "\n".join(
         [*head, *body, *_check_lines(study), *(row("note", text) for text in study.notes)]
     )
@@ -153,7 +156,7 @@ def _rung_lines(study: LevelStudy, found: Verdict) -> list[str]:
         body.append((str(n), f"{largest[k]:.2e}", f"{populations[k]:.1e}", *seen))
     return [
         "relative error by truncation; of x_e the largest, error bar included; of populations of "
-        "n = 2 to 4 the",
+        "hydrogen, n = 2 to 4, the",
         "largest difference from the longest rung at any redshift",
         *aligned([head, *body], right=True),
     ]
@@ -162,6 +165,7 @@ def _rung_lines(study: LevelStudy, found: Verdict) -> list[str]:
 def _limit_lines(study: LevelStudy) -> list[str]:
     limit, longest = study.limit.free_electron_fraction, study.rungs.n_max[-1]
     last = study.rungs.free_electron_fraction[-1]
+    samples = (_HELIUM_SAMPLES,) if study.atom == "helium" else ()
     head = ("z", "x_e, all levels", "error bar", f"x_e({longest})/x_e - 1", "exponent")
     body = [
         (
@@ -171,7 +175,7 @@ def _limit_lines(study: LevelStudy) -> list[str]:
             f"{last[k] / limit.value[k] - 1.0:+.2e}",
             f"{limit.exponent[k]:.2f}" if limit.fitted[k] else "no law",
         )
-        for k in nearest_rows(study.redshift)
+        for k in nearest_rows(study.redshift, *samples)
     ]
     return aligned([head, *body], right=True)
 

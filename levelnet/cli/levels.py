@@ -1,4 +1,4 @@
-"""``levelnet levels``: how many levels of hydrogen matter."""
+"""``levelnet levels``: how many levels of hydrogen, or of helium, matter."""
 
 from __future__ import annotations
 
@@ -25,7 +25,7 @@ if TYPE_CHECKING:
     from ..studies.verdict import Verdict
 
 NAME = "levels"
-SUMMARY = "find out how many levels of hydrogen matter"
+SUMMARY = "find out how many levels of hydrogen, or of helium, matter"
 DESCRIPTION = (
     "Run a setup on a ladder of n_max, carry x_e, T_m and the observables to infinitely many "
     "levels with error bars, hold the longest rungs against what the shorter ones foresee, say "
@@ -44,6 +44,12 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
         metavar="N,N,...",
         help="n_max of each rung, ascending, four or more, in steps of a factor two or less "
         "(default: seven in steps of sqrt(2) up to the n_max of the setup)",
+    )
+    parser.add_argument(
+        "--atom",
+        choices=("hydrogen", "helium"),
+        default="hydrogen",
+        help="whose n_max makes the rungs; the other atom is that of the setup (default: hydrogen)",
     )
     parser.add_argument(
         "--resolve",
@@ -66,7 +72,7 @@ def run(options: argparse.Namespace, console: Console) -> int:
     target = options.output or Path(f"{options.setup.stem}-levels.h5")
     check_target(target, options.force, options.setup)
     asked = () if requirement is None else tuple(requirement.to_toml().splitlines())
-    question = Question(options.within, *asked_range(setup, options), asked)
+    question = Question(options.within, *asked_range(setup, options, options.atom), asked)
     ladder = _checked_ladder(setup, rungs, resolve, options)
     start = time.monotonic()
     study = _study(setup, ladder, resolve, requirement, question, options, console)
@@ -111,15 +117,19 @@ def _checked_ladder(
     """The rungs to run; what anything later would refuse is refused here, before any work."""
     from ..report.levels import check_figures
     from ..studies.convergence import FEWEST_RUNGS
+    from ..studies.helium_ladder import n_max_of
     from ..studies.levels import check_ladder, default_rungs
 
-    ladder = default_rungs(setup.hydrogen.n_max) if rungs is None else rungs
-    if rungs is None and len(ladder) < FEWEST_RUNGS:
+    top = n_max_of(setup, options.atom)
+    ladder = default_rungs(top) if rungs is None else rungs
+    if options.atom == "helium" and not setup.helium_recombines:
+        ladder = ()  # refused below, with the reason
+    elif rungs is None and len(ladder) < FEWEST_RUNGS:
         raise InputError(
-            f"hydrogen.n_max = {setup.hydrogen.n_max}: too low for a ladder up to it; give one, "
+            f"{options.atom}.n_max = {top}: too low for a ladder up to it; give one, "
             "such as --rungs 20,30,45,70,100"
         )
-    check_ladder(setup, ladder, resolve)
+    check_ladder(setup, ladder, resolve, options.atom)
     if options.plot is not None:
         check_folder(options.plot)
         check_figures(options.plot, len(ladder), bool(resolve), options.force)
@@ -140,7 +150,7 @@ def _study(
     from ..studies.levels import level_study
     from ..studies.rung import rung_setup
 
-    cost = check_memory(rung_setup(setup, ladder[-1], None, 1e-8))
+    cost = check_memory(rung_setup(setup, ladder[-1], None, 1e-8, options.atom))
     if cost.seconds > _LONG_S:
         console.notice(
             f"estimated for the longest rung: {time_text(cost.seconds)}, "
@@ -152,6 +162,7 @@ def _study(
         return level_study(
             setup,
             ladder,
+            atom=options.atom,
             resolve=resolve,
             optical_depth_to=() if requirement is None else depths_asked(requirement),
             also_at=(question.low, question.high),
@@ -171,7 +182,7 @@ def judged(study: LevelStudy) -> tuple[Verdict, Demands | None]:
 
     asked = study.question
     if asked is None:
-        return verdict(study, WITHIN, *covered(study.redshift)), None
+        return verdict(study, WITHIN, *covered(study.redshift, study.atom)), None
     found = verdict(study, asked.within, asked.low, asked.high)
     if not asked.requirement:
         return found, None

@@ -111,12 +111,12 @@ def sample_rows(history: History) -> list[int]:
     return nearest_rows(history.redshift)
 
 
-def nearest_rows(redshift: FloatArray) -> list[int]:
-    """Find the same in a descending array of redshifts."""
+def nearest_rows(redshift: FloatArray, samples: tuple[float, ...] = _SAMPLES) -> list[int]:
+    """Find the same in a descending array of redshifts, or those nearest to other `samples`."""
     import numpy as np
 
     low, high = redshift[-1], redshift[0]
-    wanted = [z for z in _SAMPLES if low <= z <= high] or [float(high)]
+    wanted = [z for z in samples if low <= z <= high] or [float(high)]
     nearest = {int(np.argmin(np.abs(redshift - z))) for z in wanted}
     # The last output is what most readers ask for.
     return sorted(nearest | {len(redshift) - 1})

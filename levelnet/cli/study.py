@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING
 
 if TYPE_CHECKING:
     from ..history.setup import Setup
+    from ..studies.helium_ladder import Atom
     from ..studies.requirement import Requirement
 
 WITHIN = 1e-3
@@ -41,7 +42,8 @@ def add_question(parser: argparse.ArgumentParser, candidate: str) -> None:
         nargs=2,
         type=float,
         help="redshifts between which it allows it; the outputs of the setup must cover them "
-        "(default: as much of 200 to 1600 as they cover)",
+        "(default: as much of 200 to 1600 as they cover, of 1600 to 3500 where it is about "
+        "helium)",
     )
     parser.add_argument(
         "--requirement",
@@ -79,7 +81,9 @@ def asked_requirement(path: Path | None, setup: Setup) -> Requirement | None:
     return requirement
 
 
-def asked_range(setup: Setup, options: argparse.Namespace) -> tuple[float, float]:
+def asked_range(
+    setup: Setup, options: argparse.Namespace, atom: Atom = "hydrogen"
+) -> tuple[float, float]:
     """The range that the verdict is about, inside the outputs of the setup."""
     from ..history.integrate import output_redshifts
     from ..studies.level_checks import covered
@@ -87,6 +91,6 @@ def asked_range(setup: Setup, options: argparse.Namespace) -> tuple[float, float
     from ..studies.verdict import outputs_between
 
     outputs = output_redshifts(setup)
-    low, high = covered(outputs) if options.between is None else options.between
+    low, high = covered(outputs, atom) if options.between is None else options.between
     outputs_between(output_redshifts(study_setup(setup, (low, high))), options.within, low, high)
     return low, high

@@ -14,6 +14,7 @@ from ..atomic.helium_ground import GroundLines, ground_lines
 from ..atomic.helium_levels import HeliumLevels
 from ..atomic.helium_widths import OtherDecays, other_decays
 from ..atomic.levels import reduced_mass_ratio
+from ..atomic.physics import Physics, scales
 from ..atomic.species import INTERCOMBINATION_PER_S
 from ..errors import InputError
 from ..network.helium import HeliumLadders, KeptTerms
@@ -30,6 +31,7 @@ HIGHEST_FED = 7
 # Lines closer than this in ln nu are one line to what comes from above: 2 3P1 and 2 3P2 are 5e-7
 # apart, a hundredth of their Doppler width; 7 1P and 6 1P 4e-3.
 _SAME_LINE = 1e-4
+_MEASURED = Physics()
 
 
 def kept_terms(n_max: int, higher: HigherLines) -> KeptTerms:
@@ -93,6 +95,7 @@ def helium_ground_lines(
     feedback: bool,
     higher: HigherLines = "closed",
     intercombination_rate_per_s: float = INTERCOMBINATION_PER_S,
+    physics: Physics = _MEASURED,
 ) -> HeliumGroundLines:
     """Lines to 1 1S from every kept level.
 
@@ -106,28 +109,38 @@ def helium_ground_lines(
         "feedback": each n 1P is lit by (n + 1) 1P, and 2 1P by 3 1P. Free lines see the blackbody
         and light nothing.
     intercombination_rate_per_s : float, s^-1
-        Rate of 2 3P1; 0 switches it off.
+        Rate of 2 3P1 with the measured constants; 0 switches it off.
+    physics : Physics
+        Changed constants.
     """
     ground = ground_lines(ladders.levels, intercombination_rate_per_s)
     kept = ladders.kept_position.tolist()
     on = ground.rate_per_s > 0.0
     use = [i for i, level in enumerate(ground.level.tolist()) if level in kept and on[i]]
     use.sort(key=lambda i: float(ground.energy_ev[i]))
-    level, energy = ground.level[use], ground.energy_ev[use]
+    factor, hydrogen = scales(physics, charge=2), scales(physics)
+    level, energy = ground.level[use], ground.energy_ev[use] * factor.energy
+    rate = ground.rate_per_s[use] * [factor.line_to_ground(ground.kind[i]) for i in use]
     n = ladders.levels.n[level]
     others = other_decays(ladders.lines, level)
+    others = OtherDecays(
+        others.energy_ev * factor.energy,
+        others.rate_per_s * factor.line_rate,
+        others.spontaneous,
+    )
     spontaneous = np.sum(others.rate_per_s * others.spontaneous, axis=1)
-    hydrogen_chi_ev = const.RYDBERG_EV * reduced_mass_ratio(1)
+    hydrogen_chi_ev = const.RYDBERG_EV * reduced_mass_ratio(1) * hydrogen.energy
+    cross_section = photoionization_cross_section(1, 0, energy / hydrogen_chi_ev - 1.0)
     return HeliumGroundLines(
         tuple(_name(ground, ladders.levels, i) for i in use),
         np.array([kept.index(one) for one in level.tolist()]),
-        ground.rate_per_s[use] * ground.share[use],
+        rate * ground.share[use],
         energy,
         ladders.levels.statistical_weight[level],  # the ground state has weight 1
-        ground.rate_per_s[use] + spontaneous,
-        ground.rate_per_s[use],
+        rate + spontaneous,
+        rate,
         others,
-        photoionization_cross_section(1, 0, energy / hydrogen_chi_ev - 1.0),
+        cross_section * hydrogen.cross_section,
         _lit_by(np.log(energy), n, feedback, higher == "feedback"),
     )
 

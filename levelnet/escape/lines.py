@@ -101,7 +101,8 @@ class Lines:
     two_photon : "spontaneous", "stimulated" or "distorted"
         2s-1s decay without stimulation; stimulated by the blackbody; or that together with the
         absorption of the real field by 1s -> 2s ("transfer" only, and the default there).
-        Stimulation alone overstates its effect (Kholupenko & Ivanchik 2006).
+        Stimulation alone overstates its effect (Kholupenko & Ivanchik 2006). The decays of 2 1S of
+        He I and of 2s of He II follow; for them "distorted" is "stimulated".
     lyman_lines : int >= 1, or "all"
         How many Lyman lines, from Lyman-alpha up, exchange photons with the ground state; the
         others are closed: np -> 1s is left out of the network. The default 1 is the better

@@ -23,6 +23,13 @@ HIGHEST_N = 1000
 _RESERVE_BYTES = 3e8
 # Arrays over shells and resolved levels alive at once: strengths, rates, response, work space.
 _BORDERS = 6.0
+# Of helium: bytes per n^2 of its cross sections and of what is made of them at one T_r, seconds of
+# its cross sections, of one reduction of He I (per n^3), and of its levels in each evaluation, with
+# hydrogen inside the lines and without. Measured likewise, n = 10 to 60.
+_HELIUM_BYTES = 8e3
+_HELIUM_ATOM_S, _HELIUM_NODE_S, _HELIUM_PER_CUBE_S = 1.5, 1e-3, 1.6e-7
+_HELIUM_EVALUATION_S, _CONTINUUM_EVALUATION_S = 2.5e-4, 7e-4
+_HELIUM_RANGE_K = 1400.0, 27_600.0
 
 
 @dataclass(frozen=True, slots=True)
@@ -47,7 +54,9 @@ def estimate(setup: Setup) -> Cost:
     Three cubes of n_max^3/3 numbers (line strengths, couplings, factors), the cross sections, and
     the populations at every output redshift. With whole shells, the strengths of every line are
     needed still, to be averaged; the cubes of what is resolved, and the border, come on top.
-    Overrides of rates take a copy of the strengths.
+    Overrides of rates take a copy of the strengths. Helium, where it recombines, adds its own: He I
+    with two ladders, He II like hydrogen; its tables are made even where hydrogen is reduced at
+    each evaluation.
     """
     n, top = setup.hydrogen.n_max, setup.hydrogen.highest_resolved
     n_out = len(setup.grid.redshifts or ()) or setup.grid.n_redshifts
@@ -56,16 +65,33 @@ def estimate(setup: Setup) -> Cost:
     cubes = 8.0 * (copies * n**3 + (2.0 if top == n else 3.0) * top**3) / 3.0
     cubes += _BORDERS * 8.0 * border
     # Of He I and He II: both spins, and half as many.
-    helium = 1.5 * setup.helium.n_max**2
+    helium = 1.5 * setup.helium.n_max**2 * setup.helium_recombines
     populations = 5 * 8.0 * n_out * (top**2 / 2.0 + n - top + helium)
-    memory = cubes + 400.0 * n**2 + populations + _RESERVE_BYTES
+    more_bytes, more_s = _of_helium(setup, n_out)
+    memory = cubes + 400.0 * n**2 + populations + more_bytes + _RESERVE_BYTES
     low = setup.cosmology.cmb_temperature_k * (1.0 + setup.grid.redshift_end)
     nodes = node_count(low, 6000.0, table_tolerance(setup)) + 7 if setup.accuracy.interpolate else 0
     node = 7.0 / 12.0 * top**4 / _FLOP_PER_S + 3.0 * top**3 / 1e9 + _SECONDS_PER_BLOCK * top
     node += _border_seconds(top, n - top)
     evaluation = _SECONDS_PER_EVALUATION if setup.accuracy.interpolate else 5.0 * node
     seconds = (nodes + n_out) * node + _EVALUATIONS * evaluation + 1e-8 * n**3
-    return Cost(memory, seconds + _field_seconds(setup))
+    return Cost(memory, seconds + more_s + _field_seconds(setup))
+
+
+def _of_helium(setup: Setup, n_out: int) -> tuple[float, float]:
+    """Bytes and seconds that helium adds, populations apart; nothing where it is inert."""
+    if not setup.helium_recombines:
+        return 0.0, 0.0
+    n = float(setup.helium.n_max)
+    # Strengths, rates and factors of two spins, and of He II.
+    memory = 8.0 * 4.0 * 3.0 * n**3 / 3.0 + _HELIUM_BYTES * n**2
+    nodes = node_count(*_HELIUM_RANGE_K, table_tolerance(setup)) + 7
+    node = _HELIUM_NODE_S + _HELIUM_PER_CUBE_S * n**3
+    if setup.helium.helium_ion == "network":
+        node += 7.0 / 12.0 * n**4 / _FLOP_PER_S + _SECONDS_PER_BLOCK * n
+    absorbs = setup.lines.helium == "continuum"
+    evaluation = _CONTINUUM_EVALUATION_S if absorbs else _HELIUM_EVALUATION_S
+    return memory, _HELIUM_ATOM_S + (nodes + n_out) * node + _EVALUATIONS * evaluation
 
 
 def _field_seconds(setup: Setup) -> float:
@@ -104,7 +130,10 @@ def check_memory(setup: Setup, copies: int = 1, more_bytes: float = 0.0) -> Cost
     workers = f" by {copies} workers" if copies > 1 else ""
     figure = f"about {_readable(needed)} of memory needed{workers}"
     if needed > available:
-        raise InputError(f"hydrogen.n_max = {n}: {figure}, {_readable(available)} available")
+        asked = f"hydrogen.n_max = {n}"
+        if setup.helium_recombines:
+            asked += f", helium.n_max = {setup.helium.n_max}"
+        raise InputError(f"{asked}: {figure}, {_readable(available)} available")
     if n > HIGHEST_N:
         raise InputError(
             f"hydrogen.n_max = {n}: {figure}; the highest allowed is {HIGHEST_N}, "

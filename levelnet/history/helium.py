@@ -9,7 +9,8 @@ HeII per helium nucleus and second, and y = 1 - x_HeI,
 
 Where the second ionization is in Saha equilibrium, b is pulled to its value there so fast that it
 stays within 1e-7 of it; so it is in any case once x_HeIII is below 4e-18 of x_HeII, where the
-levels of He II keep it 3e-3 (relative) above Saha equilibrium. Below T_r = 1400 K both stand still.
+levels of He II keep it 3e-3 (relative) above Saha equilibrium. Below T_r = 1400 K (in units of the
+atom's energies, where constants are changed) both stand still.
 """
 
 from __future__ import annotations
@@ -23,6 +24,7 @@ import numpy as np
 from .. import constants as const
 from ..arrays import FloatArray
 from ..atomic.detailed_balance import log_saha_factor
+from ..atomic.physics import UNCHANGED, Scales
 from ..background.conditions import Conditions
 from ..escape.blue_side import log_red_side
 from ..escape.helium_continuum import continuum_depth
@@ -33,6 +35,7 @@ from ..network.coupling import GroundCoupling, with_decay
 from ..network.gradient import FlowGradient, flow_slopes, net_flow_gradient
 from ..network.reduced import Reduced
 from ..network.solve import log_boltzmann_populations, solve_kept
+from ..numerics.chebyshev import ChebyshevSeries
 from .local import Local
 
 COLDEST_K = 1400.0
@@ -168,7 +171,9 @@ class IonNetwork:
     decay : int
         Position of the kept level that decays by two photons.
     decay_rate_per_s : float, s^-1
-        Its rate.
+        Its spontaneous rate.
+    stimulation : ChebyshevSeries or None
+        Ln of the factor by which the blackbody speeds it up, over ln T_r; None: not at all.
     """
 
     reduced: Reduced
@@ -176,6 +181,7 @@ class IonNetwork:
     treatment: LineTreatment | HeliumTreatment
     decay: int
     decay_rate_per_s: float
+    stimulation: ChebyshevSeries | None = None
 
     def solve(self, conditions: Conditions, seen: Seen | None = None) -> Local:
         """Kept levels at these conditions; densities and fractions are those of the element.
@@ -200,7 +206,15 @@ class IonNetwork:
             kept, conditions.radiation_temperature_k, conditions.ground_fraction
         )
         here = math.exp(float(log_boltzmann[self.decay]))
-        return with_decay(lines, self.decay, self.decay_rate_per_s, 0.0, here)
+        rate, slope = self.decay_at(conditions.radiation_temperature_k)
+        return with_decay(lines, self.decay, rate, slope, here)
+
+    def decay_at(self, radiation_temperature_k: float) -> tuple[float, float]:
+        """Rate of the two-photon decay at T_r, s^-1, and its d ln/d ln T_r."""
+        if self.stimulation is None:
+            return self.decay_rate_per_s, 0.0
+        value, slope = self.stimulation.evaluate(math.log(radiation_temperature_k))
+        return self.decay_rate_per_s * math.exp(float(value[0])), float(slope[0])
 
     @staticmethod
     def conditions(around: Around, ion: float, ground: float) -> Conditions:
@@ -275,12 +289,20 @@ class HeliumEquations:
         Of He I and of He II, each from its ground state.
     past : HeliumPast or None
         What the run remembers of the lines of He I, where one lights another (`lines.fed`).
+    scales : Scales
+        What changed constants do to helium; all above holds it already.
     """
 
     first: IonNetwork
     second: IonNetwork | None
     ionization_ev: tuple[float, float]
     past: HeliumPast | None = None
+    scales: Scales = UNCHANGED
+
+    @property
+    def coldest_k(self) -> float:
+        """T_r below which helium is held, K."""
+        return COLDEST_K * self.scales.energy
 
     @staticmethod
     def fractions(state: FloatArray) -> HeliumFractions:
@@ -294,13 +316,17 @@ class HeliumEquations:
     def rate(self, around: Around, state: FloatArray) -> FloatArray:
         """Rates of change at (a, b), shape (2,): those of `rates`, at half the price."""
         x = self.fractions(state)
-        full, _ = _fading(around)
+        full, _ = self._fading(around)
         if full == 0.0:
             return np.zeros(2)
         seen = self._seen(around)
         first = self.first.net_flow(around, x.single, x.neutral, seen)
         by_first = -first / (around.hubble_rate_per_s * x.neutral * x.charged)
         return full * np.array([by_first, self._upper_rate(around, x, float(state[1]), first)])
+
+    def _fading(self, around: Around) -> tuple[float, float]:
+        """How much of the rates is left near `coldest_k`, and its slope by ln T_r times _EBB."""
+        return _ramp(math.log(around.radiation_temperature_k / self.coldest_k) / _EBB)
 
     def _upper_rate(self, around: Around, x: HeliumFractions, b: float, first: float) -> float:
         part, _ = _ramp((b - _GONE) / (_FADING - _GONE))
@@ -315,7 +341,7 @@ class HeliumEquations:
     def rates(self, around: Around, state: FloatArray) -> Rates:
         """Rates of change and derivatives at (a, b)."""
         x = self.fractions(state)
-        full, slope = _fading(around)
+        full, slope = self._fading(around)
         if full == 0.0:
             return _stacked([0.0] * 7, [0.0] * 7)
         first = self.first.flow(around, x.single, x.neutral, self._seen(around))
@@ -354,7 +380,7 @@ class HeliumEquations:
 
     def longest_step(self, radiation_temperature_k: float) -> float:
         """No step in ln a from here may be longer, while one line lights another."""
-        if self.past is None or radiation_temperature_k < COLDEST_K:
+        if self.past is None or radiation_temperature_k < self.coldest_k:
             return math.inf
         return self.past.longest_step
 
@@ -392,7 +418,7 @@ class HeliumEquations:
 
     def remember(self, around: Around, state: FloatArray) -> None:
         """Keep what an accepted step sends to lines below, until helium is held."""
-        if self.past is None or around.radiation_temperature_k < COLDEST_K:
+        if self.past is None or around.radiation_temperature_k < self.coldest_k:
             return
         depth = continuum_depth(
             self.past.lines, around.neutral_hydrogen_cm3, around.hubble_rate_per_s
@@ -434,7 +460,8 @@ class HeliumEquations:
         log_factor = log_saha_factor(
             weight, self.ionization_ev[stage], around.matter_temperature_k, charge=2
         )
-        return -float(log_factor) - math.log(electrons_cm3)
+        # The thermal volume goes as the reduced mass to -3/2.
+        return -float(log_factor) - math.log(electrons_cm3 * self.scales.reduced_mass**-1.5)
 
 
 def _second_rates(around: Around, x: HeliumFractions, first: Flow, second: Flow) -> list[float]:
@@ -460,11 +487,6 @@ def _second_rates(around: Around, x: HeliumFractions, first: Flow, second: Flow)
 def _stacked(first: list[float], second: list[float]) -> Rates:
     rows = np.array([first, second])
     return Rates(rows[:, 0], rows[:, 1:3], rows[:, 3], rows[:, 4], rows[:, 5], rows[:, 6])
-
-
-def _fading(around: Around) -> tuple[float, float]:
-    """How much of the rates is left near COLDEST_K, and its slope by ln T_r times _EBB."""
-    return _ramp(math.log(around.radiation_temperature_k / COLDEST_K) / _EBB)
 
 
 def _ramp(x: float) -> tuple[float, float]:

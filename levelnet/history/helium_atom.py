@@ -10,7 +10,9 @@ import numpy as np
 
 from ..arrays import FloatArray
 from ..atomic.bound_bound import einstein_a
-from ..atomic.two_photon import two_photon_rate
+from ..atomic.helium_two_photon import helium_two_photon_factor
+from ..atomic.physics import Scales, scales
+from ..atomic.two_photon import stimulated_two_photon_factor, two_photon_rate
 from ..escape.helium_continuum import HeliumContinuum
 from ..escape.helium_lines import HeliumGroundLines, HigherLines, helium_ground_lines, kept_terms
 from ..escape.helium_past import HeliumPast
@@ -24,7 +26,9 @@ from ..network.helium import (
 )
 from ..network.ladder import Ladder, hydrogen_ladder
 from ..network.reduced import KeptLevels
+from ..network.scaled import scaled_levels, with_scales
 from ..network.tabulation import TabulatedReduction, tabulate
+from ..numerics.chebyshev import ChebyshevSeries, chebyshev_nodes
 from ..pieces import Pieces, code_digest, content_key
 from ..tables import list_tables
 from .cost import table_tolerance
@@ -37,6 +41,9 @@ Recall = Callable[[float, Callable[[float], FloatArray]], FloatArray]
 _CODE = ("constants", "kernels", "numerics", "atomic", "network", "tables")
 # Tables of all runs reach at least so far, so that they share their nodes.
 _HOTTEST_K = 2.0**14.75
+# Nodes of the stimulation of two-photon decays; with them its ln is good to 1e-9, the rest being
+# the quadrature behind it.
+_STIMULATION_NODES = 28
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -79,7 +86,7 @@ def helium_lines_of(setup: Setup, ladders: HeliumLadders) -> HeliumGroundLines:
     choice, rate = setup.lines.helium_continuum, setup.helium.intercombination_rate_per_s
     fed = setup.lines.helium == "sobolev_feedback" or (choice is not None and choice.feedback)
     assert rate is not None
-    return helium_ground_lines(ladders, fed, _higher(setup), rate)
+    return helium_ground_lines(ladders, fed, _higher(setup), rate, setup.physics)
 
 
 def _higher(setup: Setup) -> HigherLines:
@@ -100,7 +107,9 @@ def build_helium(setup: Setup, hottest_k: float, tell: Tell, pieces: Pieces | No
     pieces : Pieces or None
         Store of reductions.
     """
-    treatment = helium_treatment(setup)
+    treatment, factor = helium_treatment(setup), scales(setup.physics, charge=2)
+    # Of the atom with the measured constants.
+    hottest_k /= factor.energy
     top_k = max(_HOTTEST_K, 2.0 ** (math.ceil(4.0 * math.log2(hottest_k)) / 4.0))
     tolerance = table_tolerance(setup)
     tell("helium", 0.0)
@@ -110,24 +119,42 @@ def build_helium(setup: Setup, hottest_k: float, tell: Tell, pieces: Pieces | No
     assert setup.helium.two_photon_rate_per_s is not None
     lines = helium_lines_of(setup, ladders)
     past = HeliumPast.of(lines) if lines.fed else None
-    first = IonNetwork(reduced, lines, treatment, decay, setup.helium.two_photon_rate_per_s)
-    ionization_ev = float(ladders.levels.ionization_energy_ev[0])
+    first = IonNetwork(
+        with_scales(reduced, factor),
+        lines,
+        treatment,
+        decay,
+        setup.helium.two_photon_rate_per_s * factor.two_photon_rate,
+        _stimulation(setup, helium_two_photon_factor, top_k, factor),
+    )
     # Saha equilibrium of He III too asks the ion for its energy.
-    ion = hydrogen_ladder(setup.helium.n_max, "nonrelativistic", ((2, 0), (2, 1)), charge=2)
-    energies = ionization_ev, float(ion.levels.ionization_energy_ev[0])
+    energies_of = setup.hydrogen.energies
+    ion = hydrogen_ladder(setup.helium.n_max, energies_of, ((2, 0), (2, 1)), charge=2)
+    first_ev, second_ev = (
+        float(one.ionization_energy_ev[0]) * factor.energy for one in (ladders.levels, ion.levels)
+    )
+    energies = first_ev, second_ev
     nodes, error = len(reduced.series.coefficients), reduced.interpolation_error
     if setup.helium.helium_ion == "saha":
         tell("helium", 1.0)
         return HeliumAtoms(
-            ladders, None, HeliumEquations(first, None, energies, past), nodes, error
+            ladders, None, HeliumEquations(first, None, energies, past, factor), nodes, error
         )
-    table = _table_of_second(ion, top_k, tolerance, pieces)
+    table = _table_of_second(ion, energies_of, top_k, tolerance, pieces)
     tell("helium", 1.0)
-    second = IonNetwork(table, _line_of_second(ion), Sobolev(), 0, two_photon_rate(2))
+    gap_ev = float(ion.kept.energy_ev[0])
+    second = IonNetwork(
+        with_scales(table, factor),
+        _line_of_second(ion, factor),
+        Sobolev(),
+        0,
+        two_photon_rate(2) * factor.two_photon_rate,
+        _stimulation(setup, lambda t: stimulated_two_photon_factor(t, gap_ev), top_k, factor),
+    )
     return HeliumAtoms(
         ladders,
         ion,
-        HeliumEquations(first, second, energies, past),
+        HeliumEquations(first, second, energies, past, factor),
         nodes + table.n_nodes,
         max(error, table.interpolation_error),
     )
@@ -138,11 +165,27 @@ def _terms(kept: KeptLevels) -> list[tuple[int, int, int]]:
     return list(zip(kept.n.tolist(), kept.l.tolist(), kept.spin.tolist(), strict=True))
 
 
-def _line_of_second(ion: Ladder) -> ResonanceLines:
-    rate = float(einstein_a(2, 1, 1, 0, 2))
-    upper = np.array([1])
-    weight = ion.kept.statistical_weight[upper] / ion.kept.ground_weight
-    energy_ev = ion.kept.energy_ev[upper]
+def _stimulation(
+    setup: Setup, factor_at: Callable[[FloatArray], FloatArray], top_k: float, scale: Scales
+) -> ChebyshevSeries | None:
+    """Ln of the factor of a two-photon decay in the blackbody; None where it is spontaneous.
+
+    "distorted" too is the blackbody for helium: the field resolved in frequency is hydrogen's.
+    """
+    if setup.lines.two_photon == "spontaneous":
+        return None
+    low, high = math.log(COLDEST_K), math.log(top_k)
+    nodes = chebyshev_nodes(low, high, _STIMULATION_NODES)
+    values = np.log(factor_at(np.exp(nodes)))[:, None]
+    shift = math.log(scale.energy)
+    return ChebyshevSeries.fit(low + shift, high + shift, values)
+
+
+def _line_of_second(ion: Ladder, scale: Scales) -> ResonanceLines:
+    rate = float(einstein_a(2, 1, 1, 0, 2)) * scale.line_rate
+    kept, upper = scaled_levels(ion.kept, scale), np.array([1])
+    weight = kept.statistical_weight[upper] / kept.ground_weight
+    energy_ev = kept.energy_ev[upper]
     return ResonanceLines(("2p-1s",), upper, np.array([rate]), energy_ev, weight, np.array([rate]))
 
 
@@ -156,9 +199,9 @@ def _table_of_first(
 
 
 def _table_of_second(
-    ion: Ladder, top_k: float, tolerance: float, pieces: Pieces | None
+    ion: Ladder, energies: str, top_k: float, tolerance: float, pieces: Pieces | None
 ) -> TabulatedReduction:
-    key = ("helium ion", code_digest(_CODE), ion.n_max)
+    key = ("helium ion", code_digest(_CODE), ion.n_max, energies)
     return tabulate(ion, COLDEST_K, top_k, tolerance, recall=recall_from(pieces, *key))
 
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from dataclasses import replace
 from typing import NamedTuple
 
 import numpy as np
@@ -11,9 +12,10 @@ from ..arrays import FloatArray
 from ..network.assembly import Workspace, factor_interior
 from ..network.helium_populations import helium_populations
 from ..network.populations import LevelPopulations, populations
+from ..network.scaled import as_measured
 from .course import state_at
 from .equations import SlowEquations
-from .helium import COLDEST_K, HeliumEquations, HeliumFractions
+from .helium import HeliumEquations, HeliumFractions
 from .helium_atom import HeliumAtoms
 from .helium_record import HeliumFigures
 from .integrate import Integrated
@@ -64,9 +66,9 @@ def _moment(
     state, equations = state_at(integrated, log_scale), integrated.equations
     around = equations.helium_around(log_scale, state)
     x = HeliumEquations.fractions(state[2:])
-    one = atoms.equations.first
-    conditions = one.conditions(around, x.single, x.neutral)
-    if around.radiation_temperature_k < COLDEST_K:
+    one, scales = atoms.equations.first, atoms.equations.scales
+    conditions = as_measured(one.conditions(around, x.single, x.neutral), scales)
+    if around.radiation_temperature_k < atoms.equations.coldest_k:
         held = [_ground_alone(len(atoms.first.levels), x.neutral)]
         if atoms.second is not None:
             held.append(_ground_alone(len(atoms.second.levels), x.single))
@@ -78,6 +80,7 @@ def _moment(
     if two is not None and atoms.second is not None and work is not None:
         conditions = two.conditions(around, x.double, x.single)
         second = two.solve(conditions)
+        conditions = as_measured(conditions, scales)
         factored = factor_interior(atoms.second, conditions.radiation_temperature_k, work)
         found.append(populations(factored, second.solution.log_population, conditions))
         if min(x.double, x.single) > _COUNTS:
@@ -106,9 +109,10 @@ def helium_species(
     moments : list of HeliumMoment
         Helium at every output.
     """
-    named: list[tuple[str, Levels]] = [("He I", atoms.first.levels)]
+    unit = atoms.equations.scales.energy
+    named: list[tuple[str, Levels]] = [("He I", _scaled(atoms.first.levels, unit))]
     if atoms.second is not None:
-        named.append((atoms.second.species, atoms.second.levels))
+        named.append((atoms.second.species, _scaled(atoms.second.levels, unit)))
     made = []
     for k, (name, levels) in enumerate(named):
         log_population = np.array([one.levels[k].log_population for one in moments])
@@ -118,6 +122,14 @@ def helium_species(
         departure = np.array([one.levels[k].log_departure for one in moments])
         made.append(SpeciesPopulations(name, levels, population, departure))
     return tuple(made)
+
+
+def _scaled(levels: Levels, unit: float) -> Levels:
+    return replace(
+        levels,
+        energy_ev=levels.energy_ev * unit,
+        ionization_energy_ev=levels.ionization_energy_ev * unit,
+    )
 
 
 def helium_figures(

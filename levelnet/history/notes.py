@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from ..atomic.physics import scales
 from ..escape.family import TREATMENTS
 from ..escape.left_out import left_out
 from ..escape.treatment import LineTreatment
@@ -13,14 +14,18 @@ _NOTED = 20
 
 
 def _of_helium(setup: Setup) -> list[str]:
+    if setup.cosmology.helium_ratio() == 0.0:
+        levels = setup.helium.n_max > 0
+        return ["there is no helium" + ": [helium] and its lines change nothing" * levels]
     if not setup.helium_recombines:
         return [
             "helium is neutral and inert: x_e misses its electrons above z ~ 1600, where they count"
         ]
     higher = setup.lines.helium_higher_lines or "closed"
+    coldest_k = COLDEST_K * scales(setup.physics, charge=2).energy
     notes = [
-        f"helium: levels to n_max = {setup.helium.n_max}, below T_r = {COLDEST_K:g} K held as it "
-        "is; no collisions, no stimulated two-photon decay of 2 1S",
+        f"helium: levels to n_max = {setup.helium.n_max}, below T_r = {coldest_k:.4g} K held as it "
+        "is; no collisions",
         f'helium lines: "{setup.lines.helium or "sobolev"}", n 1P-1 1S with n >= 3: "{higher}"',
     ]
     if setup.lines.helium in {None, "sobolev"}:
@@ -33,6 +38,13 @@ def _of_helium(setup: Setup) -> list[str]:
         notes.append(
             "helium lines n 1P-1 1S with n >= 3, each on its own: every further n adds escape, so "
             "that x_e does not converge with helium.n_max"
+        )
+    if not setup.accuracy.interpolate:
+        notes.append("helium is interpolated in T_r though accuracy.interpolate is false")
+    if setup.lines.two_photon != "spontaneous":
+        notes.append(
+            "helium: two-photon decay of 2 1S and of 2s of He II stimulated by the blackbody, "
+            "without absorption of the real field"
         )
     if setup.helium.helium_ion == "saha":
         notes.append("He III recombines in Saha equilibrium: x_e up to 1e-3 low near z = 6000")

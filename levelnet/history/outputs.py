@@ -12,8 +12,6 @@ from scipy.interpolate import CubicSpline
 
 from ..arrays import FloatArray
 from ..atomic.levels import level_name
-from ..atomic.physics import Scales
-from ..background.conditions import Conditions
 from ..background.quadrature import quadrature
 from ..background.scattering import opacity_per_mpc
 from ..errors import SolveError
@@ -24,6 +22,7 @@ from ..network.assembly import (
     interior_photoionization,
 )
 from ..network.populations import LevelPopulations, populations
+from ..network.scaled import as_measured
 from ..network.tabulation import TabulatedReduction
 from ..numerics.stepping import Trajectory
 from .course import electron_fraction_at, state_at
@@ -154,18 +153,9 @@ def solve_levels(
     """Kept levels, factored interior and populations of every level at one output redshift."""
     equations, log_scale = integrated.equations, -math.log1p(redshift)
     local = equations.local(log_scale, state_at(integrated, log_scale))
-    measured = _as_measured(local.conditions, equations.scales)
+    measured = as_measured(local.conditions, equations.scales)
     factored = factor_interior(integrated.ladder, measured.radiation_temperature_k, work)
     return local, factored, populations(factored, local.solution.log_population, measured)
-
-
-def _as_measured(conditions: Conditions, factor: Scales) -> Conditions:
-    """Conditions under which the atom with measured constants has the same populations."""
-    return conditions._replace(
-        radiation_temperature_k=conditions.radiation_temperature_k / factor.energy,
-        matter_temperature_k=conditions.matter_temperature_k / factor.energy,
-        hydrogen_density_cm3=conditions.hydrogen_density_cm3 * factor.density,
-    )
 
 
 def _seen(

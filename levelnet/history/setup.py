@@ -82,7 +82,8 @@ class Accuracy:
         Limit on the number of steps.
     interpolate : bool
         True: reduce the network at Chebyshev nodes in ln T_r and interpolate. False: reduce it at
-        every evaluation (slow; for checking).
+        every evaluation (slow; for checking). Helium is interpolated either way; its error is
+        among the figures of the history.
     """
 
     relative: Annotated[float, Field(ge=1e-9, le=1e-3)] = 1e-6
@@ -151,7 +152,7 @@ class Setup:
         self._check_helium()
 
     def _check_helium(self) -> None:
-        """Refuse treatments of lines that are not there, and what helium's levels do not know."""
+        """Refuse treatments of lines that are not there."""
         if self.helium.n_max == 0:
             for name in ("helium", "helium_higher_lines"):
                 if getattr(self.lines, name) is not None:
@@ -159,10 +160,11 @@ class Setup:
                         f"lines.{name}: helium is inert with helium.n_max = 0 and has no lines; "
                         "allowed from helium.n_max = 2"
                     )
-        elif self.physics != Physics():
+        elif self.helium.n_max == 2 and self.lines.helium_higher_lines in {"free", "feedback"}:
             raise ValueError(
-                "physics: changed constants are not known for the levels of helium; allowed with "
-                "helium.n_max = 0"
+                f'lines.helium_higher_lines = "{self.lines.helium_higher_lines}": with '
+                "helium.n_max = 2 there is no line n 1P -> 1 1S with n >= 3; allowed from "
+                "helium.n_max = 3"
             )
 
     def _check_feedback(self) -> None:

@@ -18,7 +18,7 @@ from .helium import Around
 # T_r between which a hand-over is looked for, in steps of 5 per cent; at the upper end hydrogen is
 # in Saha equilibrium in any cosmology the setup admits.
 _COLDEST_K, _HOTTEST_K, _FACTOR = 1100.0, 25_000.0, 1.05
-# The same with helium: its tables end there.
+# The same with helium, in units of its energies: its tables end there.
 _COLDEST_HELIUM_K, _HOTTEST_HELIUM_K = 8000.0, 27_500.0
 # Least ln(n_e/n_H) of Saha equilibrium from _COLDEST_K on.
 _FEWEST_ELECTRONS = -200.0
@@ -107,6 +107,7 @@ def saha_state(equations: SlowEquations, log_scale: float) -> FloatArray:
         return np.array([float(saha_log_odds(density, temperature, ionization)), 0.0])
     helium, ratio = equations.helium, equations.cosmology.helium_ratio()
     log_hydrogen = -float(log_saha_factor(2.0, ionization, temperature))
+    log_hydrogen += 1.5 * math.log(equations.scales.reduced_mass)
 
     def state(log_electrons: float) -> FloatArray:
         electrons = math.exp(log_electrons)
@@ -143,17 +144,19 @@ def find_handover(equations: SlowEquations, tolerance: float) -> Handover:
         If hydrogen is never close enough to equilibrium (no channel to the ground state to speak
         of).
     """
-    if equations.helium is None:
+    helium = equations.helium
+    if helium is None:
         return hydrogen_handover(equations, tolerance)
 
     def excess(log_growth: float) -> float:
         lag = ion_lags(equations, -log_growth)
         # Held in Saha equilibrium the second ionization starts anywhere.
-        watched = lag if equations.helium and equations.helium.second else lag[:2]
+        watched = lag if helium.second else lag[:2]
         return math.log(float(np.max(np.abs(watched))) / tolerance)
 
     today = float(equations.cosmology.radiation_temperature_k(0.0))
-    low, high = (math.log(edge / today) for edge in (_COLDEST_HELIUM_K, _HOTTEST_HELIUM_K))
+    unit = helium.scales.energy
+    low, high = (math.log(unit * k / today) for k in (_COLDEST_HELIUM_K, _HOTTEST_HELIUM_K))
     below = low
     while excess(below) > 0.0 and below < high:
         low, below = below, min(below + math.log(_FACTOR), high)

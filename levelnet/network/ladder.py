@@ -146,7 +146,7 @@ def hydrogen_ladder(
     overrides : tuple of Override, optional
         Factors on lines and cross sections, those inside whole shells too.
     charge : int, dimensionless
-        1: hydrogen; 2: the helium ion, whose energies are non-relativistic.
+        1: hydrogen; 2: the helium ion.
 
     Returns
     -------

@@ -3,21 +3,29 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 from ..atomic.physics import UNCHANGED, Scales
+from ..background.conditions import Conditions
 from ..errors import RangeError
 from .reduced import KeptLevels, Reduced, ReducedRates
 
 
 def scaled_levels(kept: KeptLevels, scales: Scales) -> KeptLevels:
     """Kept levels with every energy scaled."""
-    return KeptLevels(
-        kept.n,
-        kept.l,
-        kept.statistical_weight,
-        kept.energy_ev * scales.energy,
-        kept.ionization_energy_ev * scales.energy,
+    return replace(
+        kept,
+        energy_ev=kept.energy_ev * scales.energy,
+        ionization_energy_ev=kept.ionization_energy_ev * scales.energy,
+    )
+
+
+def as_measured(conditions: Conditions, scales: Scales) -> Conditions:
+    """Conditions under which the atom with measured constants has the same populations."""
+    return conditions._replace(
+        radiation_temperature_k=conditions.radiation_temperature_k / scales.energy,
+        matter_temperature_k=conditions.matter_temperature_k / scales.energy,
+        hydrogen_density_cm3=conditions.hydrogen_density_cm3 * scales.density,
     )
 
 

@@ -20,7 +20,10 @@ if TYPE_CHECKING:
     from matplotlib.axes import Axes
     from matplotlib.figure import Figure
 
-_REDSHIFTS = (1400.0, 1100.0, 800.0, 500.0, 200.0, 50.0)
+_REDSHIFTS = {
+    "hydrogen": (1400.0, 1100.0, 800.0, 500.0, 200.0, 50.0),
+    "helium": (2800.0, 2500.0, 2200.0, 2000.0, 1800.0, 1600.0),
+}
 _BEYOND = 4.0  # the law is drawn up to so many times the longest rung
 _POINTS = 25
 _LONGEST = 3  # rungs shown where the limit is shown from near
@@ -124,7 +127,7 @@ def level_figure(study: LevelStudy) -> Figure:
 
 def _shown_rows(study: LevelStudy) -> list[int]:
     low, high = study.redshift[-1], study.redshift[0]
-    wanted = [z for z in _REDSHIFTS if low <= z <= high] or [float(low)]
+    wanted = [z for z in _REDSHIFTS[study.atom] if low <= z <= high] or [float(low)]
     rows = {int(np.argmin(np.abs(study.redshift - z))) for z in wanted}
     return [k for k in sorted(rows) if study.limit.free_electron_fraction.fitted[k]]
 
@@ -168,7 +171,7 @@ def _draw_by_level(axes: Axes, study: LevelStudy) -> None:
     shown = curve[-1, _shown_rows(study)]
     if shown.size:  # room for the legend
         axes.set_ylim(bottom=1e-4 * float(np.min(np.abs(shown))))
-    axes.set_xlabel(r"highest level $n_\mathrm{max}$")
+    axes.set_xlabel(rf"highest level $n_\mathrm{{max}}$ of {study.atom}")
     if shown.size:
         axes.legend(loc="lower left", fontsize=6.5, labelspacing=0.25, handlelength=1.8)
 

@@ -7,10 +7,11 @@ from dataclasses import dataclass
 import numpy as np
 
 from ..arrays import BoolArray, FloatArray
+from .helium_ladder import Atom
 from .level_records import LevelStudy
 from .verdict import outputs_between
 
-ASKED = (200.0, 1600.0)
+ASKED: dict[Atom, tuple[float, float]] = {"hydrogen": (200.0, 1600.0), "helium": (1600.0, 3500.0)}
 """Redshifts between which error bars are held against corrections."""
 
 LARGE = 0.2
@@ -24,7 +25,7 @@ class LimitCheck:
     Attributes
     ----------
     low, high : float, dimensionless
-        Between which redshifts: as much of 200 to 1600 as the study covers.
+        Between which redshifts: as much of 200 to 1600 as the study covers; 1600 to 3500 of helium.
     bar_over_correction : float, dimensionless
         Largest error bar over the correction that leads from the longest rung to all levels; NaN
         where no redshift has a law.
@@ -58,16 +59,19 @@ class HeldOutCheck:
     largest_bar_over_correction: FloatArray
 
 
-def covered(redshift: FloatArray) -> tuple[float, float]:
-    """As much of 200 to 1600 as descending redshifts cover; all of them where that is nothing."""
+def covered(redshift: FloatArray, atom: Atom = "hydrogen") -> tuple[float, float]:
+    """As much of 200 to 1600 as descending redshifts cover; all of them where that is nothing.
+
+    Of 1600 to 3500, where the atom is helium.
+    """
     ends = float(redshift[-1]), float(redshift[0])
-    low, high = max(ASKED[0], ends[0]), min(ASKED[1], ends[1])
+    low, high = max(ASKED[atom][0], ends[0]), min(ASKED[atom][1], ends[1])
     return (low, high) if low < high else ends
 
 
 def check_limit(study: LevelStudy) -> LimitCheck:
     """Hold the error bar of the limit of x_e against the correction that was applied."""
-    low, high = covered(study.redshift)
+    low, high = covered(study.redshift, study.atom)
     asked = (study.redshift >= low) & (study.redshift <= high)
     limit = study.limit.free_electron_fraction
     law = asked & (limit.fitted == 1)
@@ -88,7 +92,7 @@ def check_held_out(study: LevelStudy) -> HeldOutCheck | None:
     actual = study.rungs.free_electron_fraction[-count:]
     before = study.rungs.free_electron_fraction[-count - 1]
     miss = np.abs(np.log(seen.value / actual)) / seen.relative_error
-    low, high = covered(study.redshift)
+    low, high = covered(study.redshift, study.atom)
     law = (study.redshift >= low) & (study.redshift <= high) & (seen.fitted == 1)
     shares = _shares(seen.relative_error, seen.value, before, law)
     return HeldOutCheck(np.max(miss, axis=1), np.max(shares, axis=1))

@@ -10,6 +10,7 @@ from ..arrays import FloatArray, IntArray, frozen_array
 from ..errors import Outcome
 from ..history.setup import Setup
 from .convergence import LARGEST_STEP, SHORTEST_LADDER
+from .helium_ladder import Atom
 
 # Outputs that end above it leave too many electrons out of the optical depth: z_* of the demo with
 # n_max = 8 is 0.08 % too high with an end at 400, and 0.5 % with one at 800.
@@ -25,7 +26,8 @@ class Rungs:
     n_max : ndarray of int, shape (n_rungs,)
         Highest n, ascending.
     resolve_l_to : ndarray of int, shape (n_rungs,)
-        Highest n with levels resolved in l; above it stand whole shells.
+        Highest n of hydrogen with levels resolved in l; above it stand whole shells. On a ladder of
+        helium the same on each rung.
     free_electron_fraction : ndarray, shape (n_rungs, n_redshift), dimensionless
         n_e/n_H.
     matter_temperature_k : ndarray, shape (n_rungs, n_redshift), K
@@ -226,6 +228,12 @@ class LevelStudy:
         frozen_array(self, "level_l", (len(self.level_n),), int)
 
     @property
+    def atom(self) -> Atom:
+        """Whose n_max makes the rungs; on those of helium hydrogen stays as it is."""
+        fixed = len(set(self.rungs.resolve_l_to.tolist())) == 1
+        return "helium" if fixed else "hydrogen"
+
+    @property
     def notes(self) -> tuple[str, ...]:
         """What a user must know before relying on the result."""
         return level_notes(self)
@@ -233,22 +241,37 @@ class LevelStudy:
     def __repr__(self) -> str:
         """One line: the rungs and the outcome."""
         rungs = ", ".join(str(n) for n in self.rungs.n_max.tolist())
-        return f"<LevelStudy n_max = {rungs}: {self.outcome.value}>"
+        return f"<LevelStudy of {self.atom} n_max = {rungs}: {self.outcome.value}>"
 
 
 def level_notes(study: LevelStudy) -> tuple[str, ...]:
     """Say what a study does and does not tell."""
-    count, accuracy = study.setup.lines.lyman_lines, study.setup.accuracy.relative
+    accuracy = study.setup.accuracy.relative
+    left_out = "collisions, line transfer" + ", helium" * (study.atom == "hydrogen")
+    return (
+        _lines_note(study),
+        f"error bars are those of truncation; numerical errors common to all rungs are below "
+        f"{accuracy:g} by tolerance (x_e measured: {study.noise.common:.0e}); what the physics "
+        f"leaves out ({left_out}) is larger and in none of them",
+        "no statement about a CMB spectrum is made without a response file",
+        *_ladder_notes(study.rungs.n_max, study.atom),
+        *_late_end(float(study.redshift[-1])),
+    )
+
+
+def _lines_note(study: LevelStudy) -> str:
+    """Which lines reach the ground state."""
+    if study.atom == "helium":
+        higher = study.setup.lines.helium_higher_lines or "closed"
+        return (
+            f"the ladder is that of helium; hydrogen has n_max = {study.setup.hydrogen.n_max} on "
+            f'every rung. Lines n 1P-1 1S with n >= 3: "{higher}", the same lines on every rung'
+        )
+    count = study.setup.lines.lyman_lines
     lines = "Lyman-alpha alone" if count == 1 else f"the lowest {count} Lyman lines"
     return (
         f"{lines} and two photons reach the ground state on every rung: truncation is kept apart "
-        "from the escape through high Lyman lines",
-        f"error bars are those of truncation; numerical errors common to all rungs are below "
-        f"{accuracy:g} by tolerance (x_e measured: {study.noise.common:.0e}); what the physics "
-        "leaves out (collisions, line transfer, helium) is larger and in none of them",
-        "no statement about a CMB spectrum is made without a response file",
-        *_ladder_notes(study.rungs.n_max),
-        *_late_end(float(study.redshift[-1])),
+        "from the escape through high Lyman lines"
     )
 
 
@@ -262,8 +285,13 @@ def _late_end(end: float) -> tuple[str, ...]:
     )
 
 
-def _ladder_notes(n_max: IntArray) -> tuple[str, ...]:
+def _ladder_notes(n_max: IntArray, atom: Atom) -> tuple[str, ...]:
     """Say so where a ladder is none of those whose error bars have been measured."""
+    if atom == "helium":
+        return (
+            "error bars were measured on ladders of hydrogen; those of helium were held against a "
+            "longer rung for one universe (n_max 4 to 12 against 20) and are a guess elsewhere",
+        )
     step, longest = float(np.max(n_max[1:] / n_max[:-1])), int(n_max[-1])
     if step <= LARGEST_STEP and longest >= SHORTEST_LADDER:
         return ()

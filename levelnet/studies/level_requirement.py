@@ -10,10 +10,12 @@ import numpy as np
 from ..arrays import FloatArray
 from ..errors import InputError
 from .convergence import first_to_pass, truncation_error
+from .helium_ladder import Atom
 from .level_records import LevelStudy
 from .levels import logarithm
 from .requirement import Finding, Requirement, check
 from .targets import parse_target
+from .verdict import n_max_name
 
 
 @dataclass(frozen=True, slots=True)
@@ -94,16 +96,17 @@ def demands(study: LevelStudy, requirement: Requirement) -> Demands:
     return Demands(found, beyond, tuple(at(n) for n in ladder.tolist()), at(furthest))
 
 
-def demands_text(found: Demands, longest: int) -> str:
-    """Say in words and numbers which n_max meets a requirement."""
+def demands_text(found: Demands, longest: int, atom: Atom = "hydrogen") -> str:
+    """Say in words and numbers which n_max of an atom meets a requirement."""
+    name = n_max_name(atom)
     worst = max(found.longer, key=_share)
     closest = f"{worst.name}: {worst.error:.2g} of {worst.limit:g} {worst.unit}"
     if found.n_max is None:
         return (
-            f"for the requirement: not known from these rungs; with ten times n_max = {longest} "
+            f"for the requirement: not known from these rungs; with ten times {name} = {longest} "
             f"still {closest}; run longer rungs"
         )
-    text = f"for the requirement: n_max = {found.n_max} (closest to its limit is {closest})"
+    text = f"for the requirement: {name} = {found.n_max} (closest to its limit is {closest})"
     if found.beyond:
         text += f"; beyond the longest rung, {longest}: by extrapolation"
     return text

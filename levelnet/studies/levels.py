@@ -17,6 +17,7 @@ from ..history.integrate import Progress, output_redshifts
 from ..history.setup import Setup
 from ..pieces import Pieces
 from .convergence import FEWEST_RUNGS, carry, check_rung_count
+from .helium_ladder import Atom, check_helium_ladder, n_max_of
 from .jobs import run_jobs
 from .level_records import Estimate, Estimates, HeldOut, LevelStudy, Noise, Rungs
 from .rung import LOW_N, RungResult, compute_rung, rung_setup, study_setup
@@ -38,6 +39,7 @@ def level_study(  # noqa: PLR0913  choices by name, each with a default
     setup: Setup,
     rungs: Iterable[int] | None = None,
     *,
+    atom: Atom = "hydrogen",
     resolve: Iterable[int] = (),
     optical_depth_to: Iterable[float] = (),
     also_at: Iterable[float] = (),
@@ -46,7 +48,7 @@ def level_study(  # noqa: PLR0913  choices by name, each with a default
     pieces: Pieces | None = None,
     progress: Progress | None = None,
 ) -> LevelStudy:
-    """Find out how many levels of hydrogen matter.
+    """Find out how many levels of hydrogen, or of helium, matter.
 
     Parameters
     ----------
@@ -57,8 +59,11 @@ def level_study(  # noqa: PLR0913  choices by name, each with a default
     rungs : iterable of int, optional
         n_max of each rung, ascending, at least 4 of them, each at least 4. The default is seven in
         steps of sqrt(2) up to the n_max of the setup.
+    atom : "hydrogen" or "helium"
+        Whose n_max makes the rungs; the other atom is that of the setup on each. Populations
+        recorded are those of hydrogen either way.
     resolve : iterable of int, optional
-        Values of resolve_l_to to try at the longest n_max, ascending.
+        Values of resolve_l_to to try at the longest n_max, ascending; of hydrogen alone.
     optical_depth_to : iterable of float, optional (dimensionless)
         Redshifts Z for which optical_depth(Z) is among the observables.
     also_at : iterable of float, optional (dimensionless)
@@ -97,14 +102,14 @@ def level_study(  # noqa: PLR0913  choices by name, each with a default
     Grin & Hirata 2010, Phys. Rev. D 81, 083005; Chluba, Vasil & Dursi 2010, Mon. Not. R. Astron.
     Soc. 407, 599 (convergence with n_max).
     """
-    ladder = default_rungs(setup.hydrogen.n_max) if rungs is None else tuple(rungs)
+    ladder = default_rungs(n_max_of(setup, atom)) if rungs is None else tuple(rungs)
     shells = tuple(resolve)
-    check_ladder(setup, ladder, shells)
+    check_ladder(setup, ladder, shells, atom)
     setup = study_setup(setup, also_at)
     relative = min(setup.accuracy.relative, _RELATIVE)
-    jobs = [rung_setup(setup, n, None, relative) for n in ladder]
+    jobs = [rung_setup(setup, n, None, relative, atom) for n in ladder]
     jobs += [rung_setup(setup, ladder[-1], top, relative) for top in shells]
-    coarse = [rung_setup(setup, n, None, _COARSER * relative) for n in ladder[:2]]
+    coarse = [rung_setup(setup, n, None, _COARSER * relative, atom) for n in ladder[:2]]
     check_memory(jobs[len(ladder) - 1], workers)
     places = _population_redshifts(output_redshifts(setup))
     task = partial(
@@ -116,7 +121,7 @@ def level_study(  # noqa: PLR0913  choices by name, each with a default
     every = [*jobs, *coarse]
     costs = [estimate(one).seconds for one in every]
     results = run_jobs(every, costs, task, executor, progress, "rungs")
-    return _assemble(jobs, len(ladder), results, places)
+    return _assemble(jobs, len(ladder), results, places, atom)
 
 
 def default_rungs(n_max: int) -> tuple[int, ...]:
@@ -125,8 +130,13 @@ def default_rungs(n_max: int) -> tuple[int, ...]:
     return tuple(sorted({max(n, LOW_N) for n in steps}))
 
 
-def check_ladder(setup: Setup, rungs: Sequence[int], resolve: Sequence[int] = ()) -> None:
+def check_ladder(
+    setup: Setup, rungs: Sequence[int], resolve: Sequence[int] = (), atom: Atom = "hydrogen"
+) -> None:
     """Raise InputError for a ladder that tells nothing, in one line."""
+    if atom == "helium":
+        check_helium_ladder(setup, rungs, resolve, LOW_N)
+        return
     top = setup.hydrogen.highest_resolved
     if top != setup.hydrogen.n_max:
         raise InputError(
@@ -170,9 +180,13 @@ def _population_redshifts(redshift: FloatArray) -> tuple[float, ...]:
 
 
 def _assemble(
-    jobs: list[Setup], n_ladder: int, results: list[RungResult], places: tuple[float, ...]
+    jobs: list[Setup],
+    n_ladder: int,
+    results: list[RungResult],
+    places: tuple[float, ...],
+    atom: Atom,
 ) -> LevelStudy:
-    rungs = _rungs(jobs[:n_ladder], results[:n_ladder])
+    rungs = _rungs(jobs[:n_ladder], results[:n_ladder], atom)
     noise = _noise(results[:2], results[len(jobs) :])
     resolved = slice(n_ladder, len(jobs))
     low = [(n, l) for n in range(1, LOW_N + 1) for l in range(n)]
@@ -190,15 +204,14 @@ def _assemble(
         carry_all(rungs, noise),
         noise,
         hold_out(rungs, noise),
-        _rungs(jobs[resolved], results[resolved]) if len(jobs) > n_ladder else None,
+        _rungs(jobs[resolved], results[resolved], atom) if len(jobs) > n_ladder else None,
     )
 
 
-def _rungs(setups: list[Setup], results: list[RungResult]) -> Rungs:
-    atoms = [one.hydrogen for one in setups]
+def _rungs(setups: list[Setup], results: list[RungResult], atom: Atom) -> Rungs:
     return Rungs(
-        np.array([atom.n_max for atom in atoms]),
-        np.array([atom.highest_resolved for atom in atoms]),
+        np.array([n_max_of(one, atom) for one in setups]),
+        np.array([one.hydrogen.highest_resolved for one in setups]),
         np.array([one.electron_fraction for one in results]),
         np.array([one.matter_temperature_k for one in results]),
         np.array([one.observable for one in results]),

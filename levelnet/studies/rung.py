@@ -19,6 +19,7 @@ from typing import NamedTuple
 import numpy as np
 
 from ..arrays import FloatArray
+from ..atomic.physics import scales
 from ..background.last_scattering import Observed, ionized_redshift, observe
 from ..background.quadrature import quadrature
 from ..errors import Outcome, SolveError
@@ -30,6 +31,7 @@ from ..history.setup import Setup
 from ..network.assembly import Workspace
 from ..numerics.threads import one_blas_thread
 from ..pieces import Pieces
+from .helium_ladder import Atom, with_n_max
 
 LOW_N = 4
 """Levels up to this n have their populations recorded."""
@@ -93,8 +95,17 @@ def study_setup(setup: Setup, also: Iterable[float] = ()) -> Setup:
     return dataclasses.replace(setup, grid=dataclasses.replace(setup.grid, redshifts=grid))
 
 
-def rung_setup(setup: Setup, n_max: int, resolve_l_to: int | None, relative: float) -> Setup:
+def rung_setup(
+    setup: Setup,
+    n_max: int,
+    resolve_l_to: int | None,
+    relative: float,
+    atom: Atom = "hydrogen",
+) -> Setup:
     """The setup of one rung; where `resolve_l_to` is None every level is resolved in l."""
+    if atom == "helium":
+        accuracy = dataclasses.replace(setup.accuracy, relative=relative)
+        return dataclasses.replace(with_n_max(setup, n_max), accuracy=accuracy)
     return dataclasses.replace(
         setup,
         hydrogen=dataclasses.replace(setup.hydrogen, n_max=n_max, resolve_l_to=resolve_l_to),
@@ -131,6 +142,8 @@ def compute_rung(
         if not integrated.trajectory.outcome.ok:
             outcome = integrated.trajectory.outcome
             text = f"rung n_max = {setup.hydrogen.n_max}: {outcome.value}"
+            if setup.helium_recombines:
+                text = f"helium n_max = {setup.helium.n_max}, {text}"
             raise SolveError(text, outcome=outcome)
         redshift = integrated.redshift
         times = (-np.log1p(redshift)).tolist()
@@ -177,14 +190,22 @@ def integrate_observed(
     setup: Setup, pieces: Pieces | None, keeps: tuple[tuple[int, int], ...] = ()
 ) -> Integrated:
     """Integrate from where observables start, or know the network from there."""
-    start = ionized_redshift(setup.cosmology, setup.helium_recombines)
+    start = _ionized_redshift(setup)
     return integrate_history(setup, lambda *_: None, pieces, keeps=keeps, start_above=start)
+
+
+def _ionized_redshift(setup: Setup) -> float:
+    """Redshift from which integrals start: with helium, where its own energies say so."""
+    found = ionized_redshift(setup.cosmology, setup.helium_recombines)
+    if not setup.helium_recombines:
+        return found
+    return (1.0 + found) * scales(setup.physics, charge=2).energy - 1.0
 
 
 def observed(setup: Setup, integrated: Integrated, optical_depth_to: tuple[float, ...]) -> Observed:
     """What an observer makes of the history, in equilibrium above its start."""
     redshift = integrated.redshift
-    ionized = ionized_redshift(setup.cosmology, setup.helium_recombines)
+    ionized = _ionized_redshift(setup)
     start = max(ionized, integrated.handover.redshift, float(redshift[0]))
     ends = -math.log1p(start), -math.log1p(float(redshift[-1]))
     grid = quadrature(setup.cosmology, *ends)

@@ -8,8 +8,8 @@ import numpy as np
 
 from ..arrays import FloatArray, IntArray
 from ..errors import InputError
-from ..history.cost import HIGHEST_N
 from .convergence import smallest_n_max, truncation_error
+from .helium_ladder import HIGHEST, Atom
 from .level_records import LevelStudy
 
 # Below it numerical errors count.
@@ -114,21 +114,27 @@ def outputs_between(redshift: FloatArray, within: float, low: float, high: float
     return inside
 
 
-def verdict_text(found: Verdict, longest: int) -> str:
-    """Say a verdict in words and numbers."""
+def verdict_text(found: Verdict, longest: int, atom: Atom = "hydrogen") -> str:
+    """Say a verdict in words and numbers; `longest` is the longest rung, of this atom."""
+    name = n_max_name(atom)
     goal = f"for {100.0 * found.within:g} % in x_e at {found.low:g} < z < {found.high:g}: "
     if found.n_max is None:
         return (
             f"{goal}not known from these rungs; error with its bar is still "
-            f"{100.0 * found.error:.2g} % at z = {found.redshift:.0f} with ten times n_max = "
+            f"{100.0 * found.error:.2g} % at z = {found.redshift:.0f} with ten times {name} = "
             f"{longest}; run longer rungs"
         )
     text = (
-        f"{goal}n_max = {found.n_max} (truncation with its error bar {100.0 * found.error:.2g} % "
+        f"{goal}{name} = {found.n_max} (truncation with its error bar {100.0 * found.error:.2g} % "
         f"at z = {found.redshift:.0f}, where it is largest)"
     )
     if found.beyond:
         text += f"; beyond the longest rung, {longest}: by extrapolation"
-    if found.n_max > HIGHEST_N:
-        text += f"; more than the {HIGHEST_N} that can be computed"
+    if found.n_max > HIGHEST[atom]:
+        text += f"; more than the {HIGHEST[atom]} that can be computed"
     return text
+
+
+def n_max_name(atom: Atom) -> str:
+    """What n_max is called: that of hydrogen has no other name."""
+    return "n_max" if atom == "hydrogen" else "helium n_max"

@@ -65,6 +65,8 @@ def test_every_number_is_checked_here() -> None:
         "HELIUM_MASS_U",
         "HYDROGEN_IONIZATION_PER_CM",
         "HYDROGEN_1S_LAMB_SHIFT_HZ",
+        "HELIUM_ION_IONIZATION_PER_CM",
+        "HELIUM_ION_2S_LAMB_SHIFT_HZ",
     }
     public = {name for name in vars(const) if name.isupper() and name != "CODATA_EDITION"}
     assert public == derived | set(EXACT) | set(MEASURED)

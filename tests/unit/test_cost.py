@@ -9,9 +9,12 @@ from typing import Any
 
 import pytest
 
+from levelnet.background.cosmology import Cosmology
 from levelnet.errors import InputError
 from levelnet.history import cost
 from levelnet.history.cost import check_memory, estimate, table_tolerance
+from levelnet.history.setup import Setup
+from tests.small_helium import helium_setup
 from tests.small_runs import small_setup
 
 
@@ -45,6 +48,34 @@ def test_populations_are_counted() -> None:
         100, grid={"redshift_start": 1800.0, "redshift_end": 20.0, "redshifts": (1000.0, 900.0)}
     )
     assert estimate(listed).memory_bytes == few
+
+
+def test_helium_is_counted() -> None:
+    small = {"hydrogen": {"n_max": 10}, "grid": {"redshift_start": 8000.0, "n_redshifts": 10}}
+    none, few, many = (
+        estimate(helium_setup(n, **{k: dict(v) for k, v in small.items()})) for n in (0, 10, 100)
+    )
+    assert none.memory_bytes < few.memory_bytes < many.memory_bytes
+    assert none.seconds < few.seconds < many.seconds
+    # Cross sections alone: 10099 terms on 100 nodes.
+    assert many.memory_bytes - none.memory_bytes > 10_099 * 100 * 8
+    slow = estimate(helium_setup(10, lines={"helium": "continuum"}))
+    plain = estimate(helium_setup(10))
+    assert slow.seconds > plain.seconds
+    saha = estimate(helium_setup(100, helium={"helium_ion": "saha"}))
+    assert saha.seconds < estimate(helium_setup(100)).seconds
+
+
+def test_helium_that_is_not_there_costs_nothing() -> None:
+    bare = Cosmology(68.0, 0.0224, 0.142, helium_mass_fraction=0.0)
+    with_levels, without = (Setup(bare, {"n_max": 8}, {"n_max": n}) for n in (50, 0))
+    assert estimate(with_levels) == estimate(without)
+
+
+def test_memory_refused_names_both_atoms(monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setattr(cost, "available_memory_bytes", lambda: 2.5e8)
+    with pytest.raises(InputError, match=r"hydrogen.n_max = 8, helium.n_max = 30: about \d+ MB"):
+        check_memory(helium_setup(30, hydrogen={"n_max": 8}))
 
 
 def test_direct_mode_costs_more_time() -> None:

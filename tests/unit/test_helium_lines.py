@@ -230,6 +230,31 @@ def test_sum_rule_of_the_outer_electron(
     assert total == pytest.approx(1.0, abs=error)
 
 
+# Absorption oscillator strengths (Drake 1996, Springer Handbook of Atomic, Molecular & Optical
+# Physics, ch. 11; from memory). Theirs have the infinite nuclear mass taken out or not: 3e-4.
+OSCILLATOR = {
+    ("2 1P", "1 1S"): 0.27616,
+    ("3 1P", "1 1S"): 0.07344,
+    ("4 1P", "1 1S"): 0.02986,
+    ("2 1P", "2 1S"): 0.37644,
+    ("3 1P", "2 1S"): 0.15135,
+    ("2 3P", "2 3S"): 0.53909,
+    ("3 3P", "2 3S"): 0.06446,
+    ("3 1D", "2 1P"): 0.71016,
+    ("3 3D", "2 3P"): 0.61024,
+}
+
+
+@pytest.mark.parametrize(("line", "published"), OSCILLATOR.items())
+def test_oscillator_strengths(line: tuple[str, str], published: float) -> None:
+    upper, lower = (LEVELS.index(*term_numbers(name)) for name in line)
+    omega = (LEVELS.energy_ev[upper] - LEVELS.energy_ev[lower]) / (2 * const.RYDBERG_EV)
+    strength = LINES.einstein_a(upper, lower) * const.ATOMIC_TIME_S
+    strength /= 2 * const.FINE_STRUCTURE**3 * omega**2
+    strength *= LEVELS.statistical_weight[upper] / LEVELS.statistical_weight[lower]
+    assert strength == pytest.approx(published, rel=6e-4)
+
+
 def test_resonance_lines_follow_the_series() -> None:
     # Oscillator strengths of Drake 1996 (from memory), n = 5 to 9.
     published = {5: 0.01504, 6: 0.00863, 7: 0.00541, 8: 0.00361, 9: 0.00253}

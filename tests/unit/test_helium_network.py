@@ -4,13 +4,26 @@ from __future__ import annotations
 
 import math
 
+import mpmath
 import numpy as np
 import pytest
 
-from levelnet.atomic.levels import ionization_scale_ev, reduced_mass_ratio
+from levelnet import constants as const
+from levelnet.atomic.levels import (
+    binding_energy_ev,
+    hydrogenic_levels,
+    ionization_scale_ev,
+    reduced_mass_ratio,
+)
 from levelnet.background.conditions import Conditions
-from levelnet.escape.helium_lines import HeliumGroundLines
-from levelnet.escape.helium_treatment import HeliumTreatment, Seen
+from levelnet.errors import InputError
+from levelnet.escape.helium_lines import (
+    HeliumGroundLines,
+    HigherLines,
+    helium_ground_lines,
+    kept_terms,
+)
+from levelnet.escape.helium_treatment import HeliumSobolev, HeliumTreatment, Seen
 from levelnet.history.helium import COLDEST_K, Around, HeliumEquations, IonNetwork
 from levelnet.history.start import equilibrium_state, ion_lags, saha_state
 from levelnet.network.assembly import Workspace, factor_interior
@@ -20,6 +33,7 @@ from levelnet.network.ladder import hydrogen_ladder
 from levelnet.network.populations import populations
 from levelnet.network.rates import assemble_rates
 from levelnet.network.reduced import ReducedRates
+from levelnet.network.solve import solve_kept
 from levelnet.network.tabulation import live_reduction
 from tests.small_helium import helium_equations
 
@@ -86,6 +100,41 @@ def test_helium_ion_is_hydrogen_scaled(temperature_k: float) -> None:
     np.testing.assert_allclose(shift, math.log(16.0 * mass), atol=1e-10)
 
 
+def test_levels_of_the_helium_ion() -> None:
+    """Published: NIST Atomic Spectra Database (from memory), cm^-1 above the ground state."""
+    levels = hydrogenic_levels(4, "measured", charge=2)
+    got = levels.energy_ev / (const.PLANCK_EV_S * const.SPEED_OF_LIGHT_CM_S)
+    assert levels.ionization_energy_ev[0] == pytest.approx(54.417765, abs=2e-6)
+    assert got[levels.index(2, 0)] == pytest.approx(329179.76, abs=0.03)
+    # 2p1/2 and 2p3/2 by their weights.
+    centroid = (329179.29 + 2.0 * 329185.15) / 3.0
+    assert got[levels.index(2, 1)] == pytest.approx(centroid, abs=0.03)
+
+
+@pytest.mark.parametrize(("n", "l"), [(2, 1), (3, 1), (3, 2), (4, 3)])
+def test_fine_structure_of_the_helium_ion(n: int, l: int) -> None:
+    """Closed form: Dirac's energies (1928, Proc. R. Soc. A 117, 610), averaged over j by weight."""
+    charge_alpha = mpmath.mpf(2 * const.FINE_STRUCTURE)
+    energies = []
+    for j in (l - 0.5, l + 0.5):
+        k = j + 0.5
+        inner = n - k + mpmath.sqrt(k * k - charge_alpha**2)
+        energies.append(1 - 1 / mpmath.sqrt(1 + (charge_alpha / inner) ** 2))
+    mean = (2 * l * energies[0] + (2 * l + 2) * energies[1]) / (4 * l + 2)
+    scale = 2.0 * const.RYDBERG_EV / const.FINE_STRUCTURE**2 * reduced_mass_ratio(2)
+    levels = hydrogenic_levels(4, "measured", charge=2)
+    got = levels.ionization_energy_ev[levels.index(n, l)]
+    # Next order: (Z alpha)^4 = 5e-8.
+    assert got == pytest.approx(float(mean) * scale, rel=1e-7)
+    plain = binding_energy_ev(np.array([n]), np.array([l]), "nonrelativistic", 2)[0]
+    assert 1e-6 < got / plain - 1.0 < 4e-5
+
+
+def test_energies_of_other_ions_are_not_known() -> None:
+    with pytest.raises(InputError, match="known for hydrogen and the helium ion only"):
+        hydrogenic_levels(3, "measured", charge=3)
+
+
 # ---- equilibrium
 
 
@@ -109,6 +158,22 @@ def test_departures_of_neutral_helium_in_equilibrium(temperature_k: float) -> No
     # The table interpolates exchange and capture, and takes their inverses from equilibrium.
     assert np.abs(levels.log_departure).max() < 1e-12
     assert levels.conservation_error < 1e-12
+
+
+@pytest.mark.parametrize("higher", ["closed", "free"])
+def test_departures_with_many_levels(higher: HigherLines) -> None:
+    """Law: the same at n_max = 30, reduced at this T_r itself, whichever lines are open."""
+    temperature_k, n_max = 6000.0, 30
+    ladders = helium_ladders(n_max, kept_terms(n_max, higher))
+    value, constants = reduce_helium(ladders, temperature_k), helium_rate_constants(ladders)
+    rates = assemble_rates(constants, value, np.zeros_like(value), temperature_k, temperature_k)
+    conditions = saha_conditions(0, temperature_k)
+    lines = helium_ground_lines(ladders, False, higher)
+    coupling = HeliumSobolev().couple(lines, ladders.kept, conditions, Seen(0.0))
+    solution = solve_kept(ladders.kept, rates, coupling, conditions)
+    levels = helium_populations(ladders, solution.log_population, conditions)
+    assert len(levels.log_departure) == n_max * (n_max + 1) - 1
+    assert np.abs(levels.log_departure).max() < 1e-12
 
 
 @pytest.mark.parametrize("temperature_k", [12_000.0, 16_000.0, 20_000.0])
