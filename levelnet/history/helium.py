@@ -15,7 +15,7 @@ levels of He II keep it 3e-3 (relative) above Saha equilibrium. Below T_r = 1400
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any, NamedTuple
 
 import numpy as np
@@ -40,9 +40,9 @@ COLDEST_K = 1400.0
 
 # Pull to Saha equilibrium in Hubble rates, and ln of x_HeIII/x_HeII between which it takes over
 # from the levels of He II, which would only ask for short steps.
-_PULL, _GONE, _FADING = 1e9, -50.0, -40.0
+PULL, GONE, FADING = 1e9, -50.0, -40.0
 # From so far above COLDEST_K, in ln T_r, rates fade to nothing.
-_EBB = 0.05
+EBB = 0.05
 ION_WEIGHT = 2.0  # of He+ in its ground state
 
 
@@ -286,34 +286,34 @@ class HeliumEquations:
     def rates(self, around: Around, state: FloatArray) -> Rates:
         """Rates of change and derivatives at (a, b)."""
         x = self.fractions(state)
-        full, slope = _ramp(math.log(around.radiation_temperature_k / COLDEST_K) / _EBB)
+        full, slope = ramp(math.log(around.radiation_temperature_k / COLDEST_K) / EBB)
         if full == 0.0:
             return _stacked([0.0] * 7, [0.0] * 7)
-        first = self.first.flow(around, x.single, x.neutral, self._seen(around))
+        first = self.first.flow(around, x.single, x.neutral, self.seen(around))
         lowest = self._first_rates(around, x, first)
         highest = self._upper_rates(around, x, float(state[1]), first)
         found = _stacked(lowest, highest)
         if full == 1.0:
             return found
         fading = Rates(*(full * part for part in found))
-        return fading._replace(by_time=fading.by_time - slope / _EBB * found.rate)
+        return fading._replace(by_time=fading.by_time - slope / EBB * found.rate)
 
     def _upper_rates(
         self, around: Around, x: HeliumFractions, b: float, first: Flow
     ) -> list[float]:
         """Rate of b and its derivatives: by the levels of He II, or by Saha equilibrium."""
-        part, slope = _ramp((b - _GONE) / (_FADING - _GONE))
+        part, slope = ramp((b - GONE) / (FADING - GONE))
         if self.second is None or part == 0.0:
-            return self._saha_rates(around, b)
+            return self.saha_pull(around, b)
         levels = _second_rates(around, x, first, self.second.flow(around, x.double, x.single))
         if part == 1.0:
             return levels
-        pulled = self._saha_rates(around, b)
+        pulled = self.saha_pull(around, b)
         mixed = [part * n + (1.0 - part) * p for n, p in zip(levels, pulled, strict=True)]
-        mixed[2] += slope / (_FADING - _GONE) * (levels[0] - pulled[0])
+        mixed[2] += slope / (FADING - GONE) * (levels[0] - pulled[0])
         return mixed
 
-    def _seen(self, around: Around) -> Seen:
+    def seen(self, around: Around) -> Seen:
         """What the lines of He I see of hydrogen and of each other."""
         hydrogen_cm3 = around.neutral_hydrogen_cm3
         if self.past is None:
@@ -323,11 +323,19 @@ class HeliumEquations:
             depth = continuum_depth(self.past.lines, hydrogen_cm3, around.hubble_rate_per_s)
         return Seen(hydrogen_cm3, self.past.blue_side(around.log_scale, around.hubble_slope, depth))
 
+    def forgetful(self) -> HeliumEquations:
+        """The same with nothing remembered yet of lines."""
+        return self.knowing(0)
+
+    def knowing(self, count: int) -> HeliumEquations:
+        """The same with the first `count` remembered steps alone."""
+        return self if self.past is None else replace(self, past=self.past.until(count))
+
     def first_local(self, around: Around, state: FloatArray) -> Local:
         """Kept levels of He I at (a, b)."""
         x = self.fractions(state)
         conditions = self.first.conditions(around, x.single, x.neutral)
-        return self.first.solve(conditions, self._seen(around))
+        return self.first.solve(conditions, self.seen(around))
 
     def line_figures(self, around: Around, state: FloatArray) -> dict[str, FloatArray]:
         """Validity figures of the lines of He I at (a, b), shape (n_lines,) each.
@@ -373,13 +381,13 @@ class HeliumEquations:
         )
         return [scale * one for one in terms]
 
-    def _saha_rates(self, around: Around, b: float) -> list[float]:
+    def saha_pull(self, around: Around, b: float) -> list[float]:
         matter_k = around.matter_temperature_k
         slope = -1.5 - self.ionization_ev[1] / (const.BOLTZMANN_EV_K * matter_k)
         pulled = self.saha_log_ratio(1, around) - b
         # Value, by a, by b, by ln n_e, by v, by ln a (T falls, n_e falls as a^-3).
         terms = (pulled, 0.0, -1.0, -1.0, -slope, slope + 3.0, 0.0)
-        return [_PULL * one for one in terms]
+        return [PULL * one for one in terms]
 
     def saha_log_ratio(self, stage: int, around: Around) -> float:
         """Ln of an ion over the stage below it (0: He II/He I) in Saha equilibrium at T_m."""
@@ -417,7 +425,7 @@ def _stacked(first: list[float], second: list[float]) -> Rates:
     return Rates(rows[:, 0], rows[:, 1:3], rows[:, 3], rows[:, 4], rows[:, 5], rows[:, 6])
 
 
-def _ramp(x: float) -> tuple[float, float]:
+def ramp(x: float) -> tuple[float, float]:
     """Smooth step from 0 at x = 0 to 1 at x = 1, and its slope."""
     x = min(max(x, 0.0), 1.0)
     return x * x * (3.0 - 2.0 * x), 6.0 * x * (1.0 - x)
