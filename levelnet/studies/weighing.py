@@ -11,6 +11,7 @@ from ..atomic.levels import LevelSet
 from ..errors import InputError, Outcome
 from ..history.setup import Setup
 from .budget_record import ErrorBudget
+from .helium_weighing import HeliumWeights
 from .targets import parse_target
 
 
@@ -52,6 +53,8 @@ class Weighing:
     parameter : ndarray, shape (n_targets, n_parameters), dimensionless
         By the ln of each parameter of the cosmology, the others held; dark energy closes the
         budget.
+    helium : HeliumWeights or None
+        By the rates of helium; None where it is inert.
     budget : ErrorBudget or None
         What uncertain rates make of these targets, and of further ones such as a band of x_e(z),
         where that was asked for.
@@ -76,6 +79,7 @@ class Weighing:
     two_photon: FloatArray
     compton: FloatArray
     parameter: FloatArray
+    helium: HeliumWeights | None = None
     budget: ErrorBudget | None = None
     notes: tuple[str, ...] = ()
 
@@ -103,7 +107,9 @@ class Weighing:
         """The same for the first `count` targets alone."""
         by_target = ("value", "bound_bound", "bound_free", "escape", "two_photon", "compton")
         cut = {name: getattr(self, name)[:count] for name in (*by_target, "parameter")}
-        return replace(self, targets=self.targets[:count], units=self.units[:count], **cut)
+        helium = None if self.helium is None else self.helium.first(count)
+        names = {"targets": self.targets[:count], "units": self.units[:count]}
+        return replace(self, helium=helium, **names, **cut)
 
     def processes(self, target: str) -> dict[str, float]:
         """Derivative by a common factor on each process, and on Lyman-alpha's escape alone.
