@@ -10,8 +10,9 @@ from typing import Any
 import numpy as np
 
 from levelnet.arrays import FloatArray, IntArray
+from levelnet.atomic.helium_transitions import helium_places, with_factors
 from levelnet.atomic.helium_widths import other_decays
-from levelnet.escape.helium_lines import HeliumGroundLines
+from levelnet.escape.helium_lines import HeliumGroundLines, with_strengths
 from levelnet.escape.helium_past import HeliumPast
 from levelnet.history.helium import HeliumEquations
 from levelnet.history.setup import Setup
@@ -21,7 +22,8 @@ from levelnet.studies.frozen import FrozenHistory, freeze, on_steps
 from levelnet.studies.scalars import scalars_of
 from levelnet.studies.targets import parse_target
 from levelnet.studies.weigh import reach
-from tests.frozen_differences import tabulated_again, with_cross_sections, with_strengths
+from tests.frozen_differences import tabulated_again, with_cross_sections
+from tests.frozen_differences import with_strengths as with_ladder_strengths
 from tests.small_helium import helium_setup
 
 TARGETS = ("x_e(2300)", "x_e(1800)", "T_m(1700)")
@@ -56,15 +58,9 @@ def frozen_helium(kind: str) -> FrozenHistory:
 
 def helium_strengths(ladders: HeliumLadders, place: IntArray, factor: float) -> HeliumLadders:
     """He I with some line strengths changed."""
-    sides, start = [], 0
-    for blocks in ladders.lines.ladders:
-        strength = blocks.strength_per_s.copy()
-        here = place[(place >= start) & (place < start + len(strength))] - start
-        strength[here] *= factor
-        sides.append(dataclasses.replace(blocks, strength_per_s=strength))
-        start += len(strength)
-    lines = dataclasses.replace(ladders.lines, ladders=(sides[0], sides[1]))
-    return dataclasses.replace(ladders, lines=lines)
+    by_place = np.ones(helium_places(ladders.lines))
+    by_place[place] = factor
+    return dataclasses.replace(ladders, lines=with_factors(ladders.lines, by_place))
 
 
 def helium_cross_sections(ladders: HeliumLadders, levels: IntArray, factor: float) -> HeliumLadders:
@@ -101,13 +97,9 @@ def with_strength(helium: HeliumEquations, line: int, factor: float) -> HeliumEq
     """One Einstein A to the ground state changed."""
     lines = helium.first.lines
     assert isinstance(lines, HeliumGroundLines)
-    names = ("einstein_a_per_s", "ground_rate_per_s", "decay_rate_per_s")
-    changed = {name: getattr(lines, name).copy() for name in names}
-    more = (factor - 1.0) * lines.ground_rate_per_s[line]
-    changed["einstein_a_per_s"][line] *= factor
-    changed["ground_rate_per_s"][line] += more
-    changed["decay_rate_per_s"][line] += more
-    return with_lines(helium, dataclasses.replace(lines, **changed))
+    by_line = np.ones(len(lines.names))
+    by_line[line] = factor
+    return with_lines(helium, with_strengths(lines, by_line))
 
 
 def with_absorption(helium: HeliumEquations, factor: float) -> HeliumEquations:
@@ -130,7 +122,7 @@ def with_ion(run: FrozenHistory, factor: float, place: IntArray, levels: IntArra
     atoms, helium = run.integrated.helium, run.equations.helium
     assert atoms is not None and atoms.second is not None and helium is not None
     assert helium.second is not None
-    ladder = with_cross_sections(with_strengths(atoms.second, place, factor), levels, factor)
+    ladder = with_cross_sections(with_ladder_strengths(atoms.second, place, factor), levels, factor)
     table: Any = helium.second.reduced
     second = dataclasses.replace(helium.second, reduced=tabulated_again(table, ladder))
     return dataclasses.replace(helium, second=second)

@@ -13,6 +13,7 @@ import numpy as np
 from .. import constants as const
 from ..arrays import FloatArray
 from ..background.conditions import Conditions
+from ..network.coupling import GroundCoupling, plus
 from ..network.reduced import KeptLevels
 from .helium_lines import HeliumGroundLines
 from .helium_past import HeliumBlueSide
@@ -52,8 +53,9 @@ def line_shares(
     kept: KeptLevels,
     conditions: Conditions,
     seen: Seen,
+    factor: FloatArray | None = None,
 ) -> LineShares:
-    """Ask the treatment about each line on its own; parameters are those of its `couple`."""
+    """Ask the treatment about each line on its own; parameters are those of `with_factors`."""
     found = np.zeros((len(LineShares._fields), len(lines.names)))
     for line, upper in enumerate(lines.upper.tolist()):
         alone = only(lines, line)
@@ -67,7 +69,38 @@ def line_shares(
             # A lift goes as the ground population, directly and through tau.
             found[6, line] = here.excess_by_ground[upper] - here.excess_source[upper]
             found[7, line] = here.excess_by_continuum[upper]
-    return LineShares(*found)
+    return LineShares(*(found if factor is None else found * factor))
+
+
+def with_factors(
+    treatment: HeliumTreatment,
+    lines: HeliumGroundLines,
+    kept: KeptLevels,
+    conditions: Conditions,
+    seen: Seen,
+    factor: FloatArray | None,
+) -> GroundCoupling:
+    """Coupling with the net flow of each line times a factor, its depth held.
+
+    Parameters
+    ----------
+    treatment, lines, kept, conditions, seen
+        As for :meth:`levelnet.escape.helium_treatment.HeliumTreatment.couple`.
+    factor : ndarray, shape (n_lines,), dimensionless, or None
+        Factors; None: all are 1.
+    """
+    coupling = treatment.couple(lines, kept, conditions, seen)
+    if factor is None:
+        return coupling
+    for line in np.flatnonzero(factor != 1.0).tolist():
+        blue = seen.blue
+        if blue is not None:
+            here = slice(line, line + 1)
+            parts = (part[here] for part in (blue.log_distortion, blue.slope, blue.by_continuum))
+            blue = HeliumBlueSide(*parts, blue.hubble_slope)
+        alone = treatment.couple(only(lines, line), kept, conditions, seen._replace(blue=blue))
+        coupling = plus(coupling, alone, float(factor[line]) - 1.0)
+    return coupling
 
 
 def only(lines: HeliumGroundLines, line: int) -> HeliumGroundLines:

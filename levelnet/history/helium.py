@@ -27,9 +27,10 @@ from ..background.conditions import Conditions
 from ..escape.blue_side import log_red_side
 from ..escape.helium_continuum import continuum_depth
 from ..escape.helium_past import HeliumPast
+from ..escape.helium_shares import with_factors
 from ..escape.helium_treatment import HeliumTreatment, Seen
 from ..escape.treatment import LineTreatment, ResonanceLines
-from ..network.coupling import GroundCoupling, with_decay
+from ..network.coupling import GroundCoupling, with_decay, with_line_factors
 from ..network.gradient import FlowGradient, flow_slopes, net_flow_gradient
 from ..network.reduced import Reduced
 from ..network.solve import log_boltzmann_populations, solve_kept
@@ -167,6 +168,8 @@ class IonNetwork:
         Position of the kept level that decays by two photons.
     decay_rate_per_s : float, s^-1
         Its rate.
+    escape_factor : ndarray, shape (n_lines,), dimensionless, or None
+        Overrides of the escape of each line; None: none.
     """
 
     reduced: Reduced
@@ -174,6 +177,7 @@ class IonNetwork:
     treatment: LineTreatment | HeliumTreatment
     decay: int
     decay_rate_per_s: float
+    escape_factor: FloatArray | None = None
 
     def solve(self, conditions: Conditions, seen: Seen | None = None) -> Local:
         """Kept levels at these conditions; densities and fractions are those of the element.
@@ -192,8 +196,11 @@ class IonNetwork:
         treatment: Any = self.treatment  # He I takes lines of its own, and what they see
         if seen is None:
             lines = treatment.couple(self.lines, kept, conditions)
+            if self.escape_factor is not None:
+                lines = with_line_factors(lines, self.lines.upper, self.escape_factor)
         else:
-            lines = treatment.couple(self.lines, kept, conditions, seen)
+            found: Any = self.lines
+            lines = with_factors(treatment, found, kept, conditions, seen, self.escape_factor)
         log_boltzmann = log_boltzmann_populations(
             kept, conditions.radiation_temperature_k, conditions.ground_fraction
         )

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -12,7 +12,13 @@ from ..arrays import FloatArray
 from ..atomic.bound_bound import einstein_a
 from ..atomic.two_photon import two_photon_rate
 from ..escape.helium_continuum import HeliumContinuum
-from ..escape.helium_lines import HeliumGroundLines, HigherLines, helium_ground_lines, kept_terms
+from ..escape.helium_lines import (
+    HeliumGroundLines,
+    HigherLines,
+    helium_ground_lines,
+    kept_terms,
+    with_strengths,
+)
 from ..escape.helium_past import HeliumPast
 from ..escape.helium_treatment import HeliumSobolev, HeliumSobolevFeedback, HeliumTreatment
 from ..escape.treatment import ResonanceLines, Sobolev
@@ -77,9 +83,15 @@ def helium_treatment(setup: Setup) -> HeliumTreatment:
 def helium_lines_of(setup: Setup, ladders: HeliumLadders) -> HeliumGroundLines:
     """Lines of the kept terms to 1 1S, and which of them lights which."""
     choice, rate = setup.lines.helium_continuum, setup.helium.intercombination_rate_per_s
+    rates = setup.rates
     fed = setup.lines.helium == "sobolev_feedback" or (choice is not None and choice.feedback)
     assert rate is not None
-    return helium_ground_lines(ladders, fed, _higher(setup), rate)
+    lines = helium_ground_lines(ladders, fed, _higher(setup), rate)
+    factor = rates.ground_line_factors(lines.names, "bound_bound")
+    if factor is not None:
+        lines = with_strengths(lines, factor)
+    sigma = rates.absorption_factor * lines.hydrogen_cross_section_cm2
+    return replace(lines, hydrogen_cross_section_cm2=sigma)
 
 
 def _higher(setup: Setup) -> HigherLines:
@@ -104,16 +116,24 @@ def build_helium(setup: Setup, hottest_k: float, tell: Tell, pieces: Pieces | No
     top_k = max(_HOTTEST_K, 2.0 ** (math.ceil(4.0 * math.log2(hottest_k)) / 4.0))
     tolerance = table_tolerance(setup)
     tell("helium", 0.0)
-    ladders = helium_ladders(setup.helium.n_max, kept_terms(setup.helium.n_max, _higher(setup)))
-    reduced = _table_of_first(ladders, top_k, tolerance, pieces)
+    changed = setup.rates.network_of("He I")
+    terms = kept_terms(setup.helium.n_max, _higher(setup))
+    ladders = helium_ladders(setup.helium.n_max, terms, overrides=changed)
+    keys = tuple(part for one in changed for part in one.key)
+    reduced = _table_of_first(ladders, top_k, tolerance, pieces, keys)
     decay = [(int(n), int(l), int(s)) for n, l, s in _terms(ladders.kept)].index((2, 0, 0))
     assert setup.helium.two_photon_rate_per_s is not None
     lines = helium_lines_of(setup, ladders)
     past = HeliumPast.of(lines) if lines.fed else None
-    first = IonNetwork(reduced, lines, treatment, decay, setup.helium.two_photon_rate_per_s)
+    rate = setup.rates.two_photon_rate_per_s(setup.helium.two_photon_rate_per_s, "He I")
+    escape = setup.rates.ground_line_factors(lines.names, "escape")
+    first = IonNetwork(reduced, lines, treatment, decay, rate, escape)
     ionization_ev = float(ladders.levels.ionization_energy_ev[0])
     # Saha equilibrium of He III too asks the ion for its energy.
-    ion = hydrogen_ladder(setup.helium.n_max, "nonrelativistic", ((2, 0), (2, 1)), charge=2)
+    changed = setup.rates.network_of("He II")
+    ion = hydrogen_ladder(
+        setup.helium.n_max, "nonrelativistic", ((2, 0), (2, 1)), None, changed, charge=2
+    )
     energies = ionization_ev, float(ion.levels.ionization_energy_ev[0])
     nodes, error = len(reduced.series.coefficients), reduced.interpolation_error
     if setup.helium.helium_ion == "saha":
@@ -121,9 +141,13 @@ def build_helium(setup: Setup, hottest_k: float, tell: Tell, pieces: Pieces | No
         return HeliumAtoms(
             ladders, None, HeliumEquations(first, None, energies, past), nodes, error
         )
-    table = _table_of_second(ion, top_k, tolerance, pieces)
+    keys = tuple(part for one in changed for part in one.key)
+    table = _table_of_second(ion, top_k, tolerance, pieces, keys)
     tell("helium", 1.0)
-    second = IonNetwork(table, _line_of_second(ion), Sobolev(), 0, two_photon_rate(2))
+    rate = setup.rates.two_photon_rate_per_s(two_photon_rate(2), "He II")
+    factor = np.array([setup.rates.ion_escape_factor()])
+    line = _line_of_second(ion)
+    second = IonNetwork(table, line, Sobolev(), 0, rate, None if factor[0] == 1.0 else factor)
     return HeliumAtoms(
         ladders,
         ion,
@@ -147,18 +171,26 @@ def _line_of_second(ion: Ladder) -> ResonanceLines:
 
 
 def _table_of_first(
-    ladders: HeliumLadders, top_k: float, tolerance: float, pieces: Pieces | None
+    ladders: HeliumLadders,
+    top_k: float,
+    tolerance: float,
+    pieces: Pieces | None,
+    changed: tuple[object, ...],
 ) -> HeliumReduction:
     tables = [one.sha256 for one in list_tables() if one.name.startswith("helium/")]
     terms = [number for term in _terms(ladders.kept) for number in term]
-    key = ("helium", code_digest(_CODE), *tables, ladders.levels.n_max, *terms)
+    key = ("helium", code_digest(_CODE), *tables, ladders.levels.n_max, *terms, *changed)
     return tabulate_helium(ladders, COLDEST_K, top_k, tolerance, recall_from(pieces, *key))
 
 
 def _table_of_second(
-    ion: Ladder, top_k: float, tolerance: float, pieces: Pieces | None
+    ion: Ladder,
+    top_k: float,
+    tolerance: float,
+    pieces: Pieces | None,
+    changed: tuple[object, ...],
 ) -> TabulatedReduction:
-    key = ("helium ion", code_digest(_CODE), ion.n_max)
+    key = ("helium ion", code_digest(_CODE), ion.n_max, *changed)
     return tabulate(ion, COLDEST_K, top_k, tolerance, recall=recall_from(pieces, *key))
 
 

@@ -29,6 +29,8 @@ from ..atomic.helium_bound_free import (
 )
 from ..atomic.helium_levels import HeliumLevels, helium_levels
 from ..atomic.helium_lines import HeliumLines, helium_lines
+from ..atomic.helium_transitions import with_helium_overrides
+from ..atomic.overrides import Override
 from ..errors import RangeError
 from ..numerics.block_cholesky import BlockCholesky, factor_symmetric
 from ..numerics.chebyshev import ChebyshevSeries, chebyshev_nodes
@@ -79,7 +81,12 @@ def _atom(n_max: int, hydrogenic: bool) -> tuple[HeliumLevels, HeliumLines, Heli
     return levels, helium_lines(levels), helium_bound_free(levels)
 
 
-def helium_ladders(n_max: int, kept: KeptTerms, hydrogenic: bool = False) -> HeliumLadders:
+def helium_ladders(
+    n_max: int,
+    kept: KeptTerms,
+    hydrogenic: bool = False,
+    overrides: tuple[Override, ...] = (),
+) -> HeliumLadders:
     """Build He I.
 
     Parameters
@@ -90,8 +97,11 @@ def helium_ladders(n_max: int, kept: KeptTerms, hydrogenic: bool = False) -> Hel
         Levels to keep.
     hydrogenic : bool
         The limit in which all must equal hydrogen.
+    overrides : tuple of Override, optional
+        Factors on lines and cross sections of He I.
     """
     levels, lines, continuum = _atom(n_max, hydrogenic)
+    lines, continuum = with_helium_overrides(lines, continuum, overrides)
     position = np.array(
         sorted((levels.index(*one) for one in kept), key=lambda i: _order(levels, i))
     )

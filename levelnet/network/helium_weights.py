@@ -9,52 +9,14 @@ doubles.
 
 from __future__ import annotations
 
-from typing import NamedTuple
-
 import numpy as np
 
 from .. import constants as const
-from ..arrays import FloatArray, IntArray
+from ..arrays import FloatArray
 from ..atomic.helium_bound_free import captured_spectrum
+from ..atomic.helium_transitions import block_start, helium_blocks
 from .helium import HeliumLadders, Reduction, factor_helium, line_rates, reduce_factored
 from .weights import NodeWeights
-
-
-class HeliumTransitions(NamedTuple):
-    """Every dipole transition between excited levels of He I.
-
-    Attributes
-    ----------
-    upper, lower : ndarray of int, shape (n_transitions,)
-        Positions among the levels; which is the upper follows from the energies.
-    place : ndarray of int, shape (n_transitions,)
-        Where each stands among the strengths of the singlets, then those of the triplets.
-    """
-
-    upper: IntArray
-    lower: IntArray
-    place: IntArray
-
-
-def helium_transitions(ladders: HeliumLadders) -> HeliumTransitions:
-    """List the transitions, singlets first; the lines to the ground state are none of them."""
-    parts = []
-    for spin, l in _blocks(ladders):
-        rows, columns = (ladders.levels.series(k, spin) for k in (l, l + 1))
-        block = ladders.lines.block(spin, l)
-        row, column = np.nonzero(block)
-        place = _start(ladders, spin, l) + row * block.shape[1] + column
-        n = row + l + 1
-        ends = np.array([rows[row - len(block) + len(rows)], columns[column]])
-        order = np.argsort(ladders.levels.energy_ev[ends], axis=0)
-        lower, upper = np.take_along_axis(ends, order, axis=0)
-        parts.append(np.stack([upper, lower, place])[:, n > 1])
-    return HeliumTransitions(*np.concatenate(parts, axis=1))
-
-
-def helium_places(ladders: HeliumLadders) -> int:
-    """Number of places for strengths, those that are zero counted."""
-    return sum(len(one.strength_per_s) for one in ladders.lines.ladders)
 
 
 def add_helium_node_weights(
@@ -74,7 +36,8 @@ def add_helium_node_weights(
     by_result : ndarray, shape (n_sets, n_pairs + n_kept * n_energies)
         Derivative of each sum by what :func:`levelnet.network.helium.reduce_helium` gives.
     total : NodeWeights
-        Added to; `bound_bound` has one column for each of :func:`helium_places`.
+        Added to; `bound_bound` has one column for each place of
+        :func:`levelnet.atomic.helium_transitions.helium_places`.
     """
     here = factor_helium(ladders, radiation_temperature_k)
     reduced = reduce_factored(ladders, here, radiation_temperature_k)
@@ -117,7 +80,7 @@ def _add_lines(
     out: FloatArray,
 ) -> None:
     kt = const.BOLTZMANN_EV_K * temperature_k
-    for spin, l in _blocks(ladders):
+    for spin, l in helium_blocks(ladders.lines):
         block = ladders.lines.block(spin, l)
         rows, columns = (ladders.levels.series(k, spin) for k in (l, l + 1))
         # The ground state is no end of these lines, and the triplets have no level n = 1.
@@ -127,16 +90,7 @@ def _add_lines(
         up, back = line_rates(ladders, own, other, block[first:], kt)
         flow = populations[:, :, rows, None] * up - populations[:, :, None, columns] * back
         gain = fates[:, None, columns] - fates[:, rows, None]
-        start = _start(ladders, spin, l)
+        start = block_start(ladders.lines, spin, l)
         part = out[:, start : start + block.size].reshape(len(out), *block.shape)
         part[:, first:] += np.einsum("skab,kab->sab", flow, gain)
 
-
-def _blocks(ladders: HeliumLadders) -> list[tuple[int, int]]:
-    return [(spin, l) for spin in (0, 1) for l in range(ladders.levels.n_max - 1)]
-
-
-def _start(ladders: HeliumLadders, spin: int, l: int) -> int:
-    singlets, triplets = ladders.lines.ladders
-    before = len(singlets.strength_per_s) if spin else 0
-    return before + int((triplets if spin else singlets).offset[l])

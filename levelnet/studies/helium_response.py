@@ -110,7 +110,7 @@ def _response(
             gradient, slopes, two_photon, nothing, escape, nothing, 0.0, nothing
         )
     assert isinstance(lines, HeliumGroundLines)
-    share = line_shares(treatment, lines, kept, conditions, seen)
+    share = line_shares(treatment, lines, kept, conditions, seen, network.escape_factor)
     by_loss, by_excess = gradient.loss[upper, upper], gradient.excess[upper]
     by_field = by_excess * share.excess_by_field
     by_depth = float(by_excess @ share.excess_by_depth)

@@ -8,6 +8,7 @@ from typing import NamedTuple
 import numpy as np
 
 from ..arrays import FloatArray
+from ..atomic.helium_transitions import HeliumTransitions, helium_places, helium_transitions
 from ..atomic.helium_widths import OtherDecays
 from ..background.parameters import (
     COSMOLOGICAL,
@@ -19,12 +20,7 @@ from ..escape.helium_lines import HeliumGroundLines
 from ..history.integrate import Progress
 from ..network.assembly import Workspace
 from ..network.helium import HeliumLadders, HeliumReduction
-from ..network.helium_weights import (
-    HeliumTransitions,
-    add_helium_node_weights,
-    helium_places,
-    helium_transitions,
-)
+from ..network.helium_weights import add_helium_node_weights
 from ..network.ladder import Ladder
 from ..network.reduction import exchange_pairs
 from ..network.tabulation import TabulatedReduction
@@ -96,7 +92,7 @@ def weigh_helium(
     along = _Along(history, stages, memory, weight)
     first = _points(along, 0)
     ladders, lines = _atom(history)
-    found = helium_transitions(ladders)
+    found = helium_transitions(ladders.lines)
     table = history.equations.helium.first.reduced if history.equations.helium else None
     assert isinstance(table, HeliumReduction)
     results = node_results(helium_table(table), first.flowing, first.weights)
@@ -155,7 +151,7 @@ def _by_widths(
     points: _Points, lines: HeliumGroundLines, ladders: HeliumLadders, found: HeliumTransitions
 ) -> FloatArray:
     """DJ by line strengths through the widths of the upper levels of lines to the ground state."""
-    result = np.zeros((len(points.weights), helium_places(ladders)))
+    result = np.zeros((len(points.weights), helium_places(ladders.lines)))
     others: OtherDecays = lines.others
     place = {
         frozenset(ends): k
@@ -182,7 +178,7 @@ def _by_widths(
 def _first_nodes(ladders: HeliumLadders, results: NodeResults, tell: Progress) -> NodeWeights:
     count = results.by_result.shape[1]
     total = NodeWeights(
-        np.zeros((count, helium_places(ladders))), np.zeros((count, len(ladders.levels)))
+        np.zeros((count, helium_places(ladders.lines))), np.zeros((count, len(ladders.levels)))
     )
     temperatures = results.temperature_k.tolist()
     for k, (temperature_k, by) in enumerate(zip(temperatures, results.by_result, strict=True)):

@@ -132,7 +132,7 @@ def test_the_default_table() -> None:
 
 def test_default_sigmas_follow_from_the_numbers_that_their_sources_name() -> None:
     """Arithmetic on the published numbers that stand in the column source."""
-    sigma = read_table(room.DEFAULT_TABLE).numbers["sigma"].tolist()
+    sigma = read_table(room.DEFAULT_TABLES[0]).numbers["sigma"].tolist()
     # CODATA 2022, 6.6524587051(62)e-29 m^2 (from memory).
     assert sigma[0] == pytest.approx(6.2e-38 / 6.6524587051e-29, rel=5e-3)
     # 5 kT/(m_e c^2): k = 8.617e-5 eV/K, m_e c^2 = 511 keV.
@@ -151,7 +151,7 @@ def test_default_sigmas_follow_from_the_numbers_that_their_sources_name() -> Non
 def test_damage_to_the_default_table_is_seen(tmp_path: Path, monkeypatch) -> None:
     (tmp_path / "hydrogen").mkdir()
     real = atomic_tables.path("")
-    for name in ("sources.toml", f"{room.DEFAULT_TABLE}.csv"):
+    for name in ("sources.toml", f"{room.DEFAULT_TABLES[0]}.csv"):
         (tmp_path / name).write_bytes((real / name).read_bytes() + b"\n")
     monkeypatch.setattr(atomic_tables, "path", lambda name: tmp_path / name)
     with pytest.raises(TableError, match="checksum differs"):

@@ -2,46 +2,22 @@
 
 from __future__ import annotations
 
-import dataclasses
 import math
 
 import numpy as np
 import pytest
 
+from levelnet.atomic.helium_transitions import helium_places, helium_transitions
 from levelnet.network.helium import HeliumLadders, reduce_helium
-from levelnet.network.helium_weights import (
-    add_helium_node_weights,
-    helium_places,
-    helium_transitions,
-)
+from levelnet.network.helium_weights import add_helium_node_weights
 from levelnet.network.weights import NodeWeights
 from tests.frozen_differences import slope
+from tests.helium_differences import helium_cross_sections, helium_strengths
 from tests.small_helium_lines import small_ladders
 
 
-def with_strengths(ladders: HeliumLadders, place: np.ndarray, factor: float) -> HeliumLadders:
-    """He I with some line strengths changed."""
-    sides, start = [], 0
-    for blocks in ladders.lines.ladders:
-        strength = blocks.strength_per_s.copy()
-        here = place[(place >= start) & (place < start + len(strength))] - start
-        strength[here] *= factor
-        sides.append(dataclasses.replace(blocks, strength_per_s=strength))
-        start += len(strength)
-    lines = dataclasses.replace(ladders.lines, ladders=(sides[0], sides[1]))
-    return dataclasses.replace(ladders, lines=lines)
-
-
-def with_cross_sections(ladders: HeliumLadders, levels: np.ndarray, factor: float) -> HeliumLadders:
-    """He I with some cross sections changed."""
-    sigma = ladders.bound_free.cross_section_cm2.copy()
-    sigma[levels] *= factor
-    changed = dataclasses.replace(ladders.bound_free, cross_section_cm2=sigma)
-    return dataclasses.replace(ladders, bound_free=changed)
-
-
 def weights(ladders: HeliumLadders, kelvin: float, by: np.ndarray) -> NodeWeights:
-    shapes = (len(by), helium_places(ladders)), (len(by), len(ladders.levels))
+    shapes = (len(by), helium_places(ladders.lines)), (len(by), len(ladders.levels))
     total = NodeWeights(*(np.zeros(shape) for shape in shapes))
     add_helium_node_weights(ladders, kelvin, by, total)
     return total
@@ -53,26 +29,26 @@ def test_every_rate_against_differences(higher: str, n_max: int, kelvin: float) 
     ladders = small_ladders(higher, n_max)
     draw = np.random.default_rng(20261201)
     by = draw.normal(size=(2, len(reduce_helium(ladders, kelvin))))
-    found, listed = weights(ladders, kelvin, by), helium_transitions(ladders)
+    found, listed = weights(ladders, kelvin, by), helium_transitions(ladders.lines)
     few = draw.choice(len(listed.place), min(12, len(listed.place)), replace=False)
     for k in few.tolist():
         place = listed.place[[k]]
         changed = slope(
             lambda h, place=place: by
-            @ reduce_helium(with_strengths(ladders, place, math.exp(h)), kelvin)
+            @ reduce_helium(helium_strengths(ladders, place, math.exp(h)), kelvin)
         )
         np.testing.assert_allclose(found.bound_bound[:, place[0]], changed, rtol=1e-7, atol=1e-8)
     for level in draw.choice(np.arange(1, len(ladders.levels)), 3, replace=False).tolist():
         changed = slope(
             lambda h, level=level: by
-            @ reduce_helium(with_cross_sections(ladders, np.array([level]), math.exp(h)), kelvin)
+            @ reduce_helium(helium_cross_sections(ladders, np.array([level]), math.exp(h)), kelvin)
         )
         np.testing.assert_allclose(found.bound_free[:, level], changed, rtol=1e-7, atol=1e-8)
 
 
 def test_transitions_are_those_of_the_selection_rules() -> None:
     ladders = small_ladders("closed", 4)
-    levels, found = ladders.levels, helium_transitions(small_ladders("closed", 4))
+    levels, found = ladders.levels, helium_transitions(ladders.lines)
     l, spin, energy = levels.l, levels.spin, levels.energy_ev
     pairs = {
         (a, b)
@@ -94,6 +70,6 @@ def test_no_weight_but_where_a_rate_stands() -> None:
     ladders = small_ladders("closed", 4)
     by = np.ones((1, len(reduce_helium(ladders, 5000.0))))
     found = weights(ladders, 5000.0, by)
-    others = np.setdiff1d(np.arange(found.bound_bound.shape[1]), helium_transitions(ladders).place)
+    others = np.setdiff1d(np.arange(found.bound_bound.shape[1]), helium_transitions(ladders.lines).place)
     assert not found.bound_bound[:, others].any()
     assert not found.bound_free[:, 0].any()
