@@ -128,9 +128,7 @@ class Rates:
         """The same of "H I", "He I" or "He II"."""
         of = self._of(species)
         return tuple(
-            one
-            for one in of
-            if one.selector.process in _NETWORK and not one.selector.to_ground
+            one for one in of if one.selector.process in _NETWORK and not one.selector.to_ground
         )
 
     def _of(self, species: str) -> list[Override]:

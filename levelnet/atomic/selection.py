@@ -341,7 +341,9 @@ def _helium_selector(process: str, upper: str, lower: str, text: str) -> Selecto
 def check_exists(selector: Selector, atom: AtomSize, where: str) -> None:
     """Raise InputError, which begins with `where`, if the atom has no rate that is selected."""
     if not selector.exists_in(atom):
-        raise InputError(f'{where}: selector "{selector.text}" matches nothing in {_what(selector, atom)}')
+        raise InputError(
+            f'{where}: selector "{selector.text}" matches nothing in {_what(selector, atom)}'
+        )
 
 
 def _what(selector: Selector, atom: AtomSize) -> str:

@@ -99,7 +99,9 @@ def parse_term(column: str, text: str) -> TermPattern:
             f'{column} = "He I {text}": excited terms have n from 2 up, and a range ascends'
         )
     if l is not None and l >= high:
-        raise InputError(f'{column} = "He I {text}": is no term; l = {l} needs n of at least {l + 1}')
+        raise InputError(
+            f'{column} = "He I {text}": is no term; l = {l} needs n of at least {l + 1}'
+        )
     spin = None if found["spin"] is None else (int(found["spin"]) - 1) // 2
     j = None if found["j"] is None else int(found["j"])
     if j is not None and (low, high, l, spin) != (2, 2, 1, 1):

@@ -132,9 +132,7 @@ def _seen_by(seen: Seen, line: int) -> Seen:
         return seen
     here = slice(line, line + 1)
     distortion, slope = seen.blue.log_distortion[here], seen.blue.slope[here]
-    return seen._replace(
-        blue=HeliumBlueSide(distortion, slope, np.ones(1), seen.blue.hubble_slope)
-    )
+    return seen._replace(blue=HeliumBlueSide(distortion, slope, np.ones(1), seen.blue.hubble_slope))
 
 
 def _by_width(

@@ -93,4 +93,3 @@ def _add_lines(
         start = block_start(ladders.lines, spin, l)
         part = out[:, start : start + block.size].reshape(len(out), *block.shape)
         part[:, first:] += np.einsum("skab,kab->sab", flow, gain)
-

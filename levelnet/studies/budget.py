@@ -218,7 +218,7 @@ def _derivatives(weighing: Weighing, selector: Selector) -> FloatArray | None:
         return None if weighing.helium is None else _of_helium(weighing.helium, selector)
     part: Weighing | IonWeights | None = weighing
     if selector.species == "He II":
-        part = None if weighing.helium is None else weighing.helium.ion
+        part = weighing.helium_ion
     if part is None:
         return None
     if process in {"two_photon", "compton"}:
@@ -262,4 +262,5 @@ def _weighed(weighing: Weighing, species: str) -> str:
         return "helium was inert"
     if species == "He I":
         return f"{len(helium.levels)} levels of He I and {', '.join(helium.lines)}"
-    return "He II in Saha equilibrium" if helium.ion is None else f"{len(helium.ion.levels)} levels"
+    ion = weighing.helium_ion
+    return "He II in Saha equilibrium" if ion is None else f"{len(ion.levels)} levels of He II"

@@ -106,9 +106,7 @@ def _response(
     treatment, lines = network.treatment, network.lines
     if not isinstance(treatment, HeliumTreatment) or seen is None:
         escape = gradient.channel[upper]
-        return Response(
-            gradient, slopes, two_photon, nothing, escape, nothing, 0.0, nothing
-        )
+        return Response(gradient, slopes, two_photon, nothing, escape, nothing, 0.0, nothing)
     assert isinstance(lines, HeliumGroundLines)
     share = line_shares(treatment, lines, kept, conditions, seen, network.escape_factor)
     by_loss, by_excess = gradient.loss[upper, upper], gradient.excess[upper]

@@ -46,6 +46,7 @@ class Helium(NamedTuple):
     """What helium adds to a weighing: derivatives dJ by its rates, and by each parameter."""
 
     weights: HeliumWeights
+    ion: IonWeights | None
     parameter: FloatArray
 
 
@@ -110,9 +111,8 @@ def weigh_helium(
         _summed(first, "escape"),
         _summed(first, "two_photon"),
         _summed(first, "absorption") + _remembered_absorption(along),
-        _second(along, tell),
     )
-    return Helium(made, _parameters(along))
+    return Helium(made, _second(along, tell), _parameters(along))
 
 
 def _atom(history: FrozenHistory) -> tuple[HeliumLadders, HeliumGroundLines]:
@@ -271,4 +271,3 @@ def _remembered_parameters(along: _Along) -> FloatArray:
         by = hydrogen_derivatives(cosmology) - hubble[edge]
         result += np.outer(memory.continuum[:, edge].sum(axis=1), by)
     return result
-

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, fields, replace
-from typing import Any
+from typing import TypeVar
 
 import numpy as np
 
@@ -86,8 +86,6 @@ class HeliumWeights:
         By the two-photon rate of 2 1S.
     absorption : ndarray, shape (n_targets,), dimensionless
         By the cross section of H I 1s inside the lines of He I and between them.
-    ion : IonWeights or None
-        He II; None where it recombines in Saha equilibrium.
     """
 
     levels: HeliumLevels
@@ -101,7 +99,6 @@ class HeliumWeights:
     escape: FloatArray
     two_photon: FloatArray
     absorption: FloatArray
-    ion: IonWeights | None = None
 
     def __post_init__(self) -> None:
         """Check shapes and make every array read-only."""
@@ -116,18 +113,6 @@ class HeliumWeights:
         for name in ("strength", "escape"):
             frozen_array(self, name, (count, len(self.lines)))
 
-    def first(self, count: int) -> HeliumWeights:
-        """The same for the first `count` targets alone."""
-        ion = None if self.ion is None else _cut(self.ion, count)
-        cut: HeliumWeights = replace(_cut(self, count), ion=ion)
-        return cut
-
-    def over(self, value: FloatArray) -> HeliumWeights:
-        """Every derivative divided by `value`, shape (n_targets,)."""
-        ion = None if self.ion is None else _over(self.ion, value)
-        made: HeliumWeights = replace(_over(self, value), ion=ion)
-        return made
-
     def processes(self, at: int) -> dict[str, float]:
         """Derivative of one target by a common factor on each process of He I."""
         return {
@@ -140,24 +125,25 @@ class HeliumWeights:
         }
 
 
-_BY_TARGET = (
-    "bound_bound",
-    "bound_free",
-    "strength",
-    "escape",
-    "two_photon",
-    "absorption",
-)
+_BY_TARGET = ("bound_bound", "bound_free", "strength", "escape", "two_photon", "absorption")
+
+Part = TypeVar("Part", HeliumWeights, IonWeights)
 
 
-def _by_target(part: Any) -> dict[str, FloatArray]:
-    return {f.name: getattr(part, f.name) for f in fields(part) if f.name in _BY_TARGET}
-
-
-def _cut(part: Any, count: int) -> Any:
+def first_of(part: Part | None, count: int) -> Part | None:
+    """The same for the first `count` targets alone."""
+    if part is None:
+        return None
     return replace(part, **{name: values[:count] for name, values in _by_target(part).items()})
 
 
-def _over(part: Any, value: FloatArray) -> Any:
+def over(part: Part | None, value: FloatArray) -> Part | None:
+    """Every derivative divided by `value`, shape (n_targets,)."""
+    if part is None:
+        return None
     divided = {name: (values.T / value).T for name, values in _by_target(part).items()}
     return replace(part, **divided)
+
+
+def _by_target(part: HeliumWeights | IonWeights) -> dict[str, FloatArray]:
+    return {f.name: getattr(part, f.name) for f in fields(part) if f.name in _BY_TARGET}

@@ -37,6 +37,7 @@ from ..pieces import Pieces
 from .frozen import FrozenHistory, freeze
 from .helium_memory import HeliumMemory, helium_stages
 from .helium_weigh import Helium, weigh_helium
+from .helium_weighing import over
 from .scalars import Scalars, scalars_of
 from .sensitivity import StageRates, hydrogen_results, line_parameters, stage_rates, stages
 from .targets import Target, parse_target
@@ -208,7 +209,8 @@ def _assemble(
         direct.two_photon / value,
         direct.compton / value,
         parameter,
-        None if helium is None else helium.weights.over(value),
+        None if helium is None else over(helium.weights, value),
+        None if helium is None else over(helium.ion, value),
         notes=notes_of(setup, history.equations.treatment),
     )
 

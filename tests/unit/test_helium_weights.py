@@ -34,14 +34,19 @@ def test_every_rate_against_differences(higher: str, n_max: int, kelvin: float) 
     for k in few.tolist():
         place = listed.place[[k]]
         changed = slope(
-            lambda h, place=place: by
-            @ reduce_helium(helium_strengths(ladders, place, math.exp(h)), kelvin)
+            lambda h, place=place: (
+                by @ reduce_helium(helium_strengths(ladders, place, math.exp(h)), kelvin)
+            )
         )
         np.testing.assert_allclose(found.bound_bound[:, place[0]], changed, rtol=1e-7, atol=1e-8)
     for level in draw.choice(np.arange(1, len(ladders.levels)), 3, replace=False).tolist():
         changed = slope(
-            lambda h, level=level: by
-            @ reduce_helium(helium_cross_sections(ladders, np.array([level]), math.exp(h)), kelvin)
+            lambda h, level=level: (
+                by
+                @ reduce_helium(
+                    helium_cross_sections(ladders, np.array([level]), math.exp(h)), kelvin
+                )
+            )
         )
         np.testing.assert_allclose(found.bound_free[:, level], changed, rtol=1e-7, atol=1e-8)
 
@@ -70,6 +75,8 @@ def test_no_weight_but_where_a_rate_stands() -> None:
     ladders = small_ladders("closed", 4)
     by = np.ones((1, len(reduce_helium(ladders, 5000.0))))
     found = weights(ladders, 5000.0, by)
-    others = np.setdiff1d(np.arange(found.bound_bound.shape[1]), helium_transitions(ladders.lines).place)
+    others = np.setdiff1d(
+        np.arange(found.bound_bound.shape[1]), helium_transitions(ladders.lines).place
+    )
     assert not found.bound_bound[:, others].any()
     assert not found.bound_free[:, 0].any()
