@@ -1,4 +1,4 @@
-"""A history with helium on frozen steps, with one rate changed: differences that hold a weighing."""
+"""Scalars of a frozen history with helium and one rate changed, to hold a weighing."""
 
 from __future__ import annotations
 

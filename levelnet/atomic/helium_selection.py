@@ -8,8 +8,8 @@ import numpy as np
 
 from ..arrays import BoolArray, IntArray
 from .helium_levels import HeliumLevels, term_numbers
-from .selection import Selector, line_selected
-from .term_patterns import TermPattern
+from .selection import Selector
+from .term_patterns import TermPattern, line_selected
 
 
 def term_mask(selector: Selector, levels: HeliumLevels) -> BoolArray:

@@ -100,8 +100,8 @@ def with_helium_overrides(
             mask = term_pair_mask(one.selector, lines.levels, found.upper, found.lower)
             if not mask.any():
                 raise InputError(
-                    f'{one.where}: selector "{one.selector.text}" matches no line of He I: the upper '
-                    "term has the higher energy"
+                    f'{one.where}: selector "{one.selector.text}" matches no line of He I: the '
+                    "upper term has the higher energy"
                 )
             factor[found.place[mask]] *= one.factor
         lines = with_factors(lines, factor)

@@ -238,8 +238,8 @@ def _factor_of(row: SelectorRow, value_per_s: float) -> float:
     name = row.selector.transition
     if name is None and row.selector.species != "H I":
         raise InputError(
-            f"{row.where}: value_per_s: rates of {row.selector.species} but those of two_photon take "
-            "a factor"
+            f"{row.where}: value_per_s: rates of {row.selector.species} but those of two_photon "
+            "take a factor"
         )
     if name is None:
         raise InputError(

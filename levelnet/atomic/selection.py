@@ -3,8 +3,8 @@
 A level pattern is ``3d`` (one level), ``3`` (every l of n = 3), ``3-10`` or ``3-*`` (a range of n),
 or ``*`` (every excited level), each with an orbital letter or ``[l=25]`` behind it where one l is
 meant: ``3-10p``, ``*d``. A whole shell has no l, so only patterns without one select it. Levels are
-those of hydrogen unless the species stands before: ``He II 3d``, and ``He I 2 3P`` with the patterns of
-:mod:`levelnet.atomic.term_patterns`.
+those of hydrogen unless the species stands before: ``He II 3d``, and ``He I 2 3P`` with the
+patterns of :mod:`levelnet.atomic.term_patterns`.
 """
 
 from __future__ import annotations
@@ -19,7 +19,14 @@ from ..arrays import BoolArray, IntArray
 from ..errors import InputError
 from .levels import ORBITAL_LETTERS, LevelSet
 from .term_patterns import ENDLESS as _ENDLESS
-from .term_patterns import GROUND_TERM, TermPattern, parse_term
+from .term_patterns import (
+    GROUND_TERM,
+    HeliumSize,
+    TermPattern,
+    in_helium,
+    term_patterns,
+    terms_overlap,
+)
 
 PROCESSES = ("bound_bound", "bound_free", "two_photon", "escape", "compton", "absorption")
 """What a selector may name first."""
@@ -35,30 +42,6 @@ _FORMS = (
 _LONGEST = 40  # characters of a bad pattern that a complaint repeats
 
 
-class HeliumSize(NamedTuple):
-    """What helium has.
-
-    Attributes
-    ----------
-    n_max : int
-        Highest n; 0: helium is inert.
-    resonance_to : int
-        Highest n of n 1P whose line to 1 1S is open.
-    intercombination : bool
-        Whether 2 3P1-1 1S is on.
-    absorption : bool
-        Whether neutral hydrogen absorbs inside the lines.
-    ion : bool
-        Whether He II has levels.
-    """
-
-    n_max: int = 0
-    resonance_to: int = 2
-    intercombination: bool = True
-    absorption: bool = False
-    ion: bool = False
-
-
 class AtomSize(NamedTuple):
     """What atoms have: levels of hydrogen to `n_max`, in l to `resolve_l_to`, open Lyman lines."""
 
@@ -71,8 +54,6 @@ class AtomSize(NamedTuple):
 ANY_ATOM = AtomSize(
     _ENDLESS, _ENDLESS, _ENDLESS, HeliumSize(_ENDLESS, _ENDLESS, absorption=True, ion=True)
 )
-# Terms besides n 1P from which lines go to the ground state, with their levels J.
-_FORBIDDEN = ((2, 0, 1, None), (2, 1, 1, 1), (2, 1, 1, 2))
 
 
 @dataclass(frozen=True, slots=True)
@@ -104,9 +85,6 @@ class LevelPattern:
         both = LevelPattern(max(self.low, other.low), min(self.high, other.high), l)
         both = both.inside(ANY_ATOM)
         return both if both.low <= both.high else None
-
-
-_Ends = tuple[object, object]
 
 
 @dataclass(frozen=True, slots=True)
@@ -148,17 +126,19 @@ class Selector:
 
     def exists_in(self, atom: AtomSize) -> bool:
         """Whether the atom has a rate that this selects."""
+        helium = atom.helium
         if self.process == "absorption":
-            return atom.helium.absorption
+            return helium.absorption
         if self.species == "He I":
-            return _in_helium(self, atom.helium)
+            return in_helium(self.process, self.upper, self.lower, helium)
         if self.species == "He II":
-            if not atom.helium.ion:
-                return False
-            atom = AtomSize(atom.helium.n_max, atom.helium.n_max, 1)
-        if self.upper is None:
+            atom = AtomSize(helium.n_max, helium.n_max, 1)
+            return helium.ion and self._in_hydrogenic(atom)
+        return self._in_hydrogenic(atom)
+
+    def _in_hydrogenic(self, atom: AtomSize) -> bool:
+        if not isinstance(self.upper, LevelPattern):
             return True
-        assert isinstance(self.upper, LevelPattern)
         if self.process == "escape":
             top = min(atom.n_max, atom.lyman_lines + 1)
             return self.upper.low <= min(self.upper.high, top)
@@ -175,7 +155,7 @@ class Selector:
             return True
         one, two = (self.upper, self.lower), (other.upper, other.lower)
         if self.species == "He I":
-            return _terms_overlap(one, two)
+            return terms_overlap(one, two)
         upper, lower = (_common(*ends) for ends in zip(one, two, strict=True))
         if lower is None or upper is None:
             return upper is not None and self.lower is None
@@ -186,45 +166,6 @@ def _common(one: object, two: object) -> LevelPattern | None:
     if isinstance(one, LevelPattern) and isinstance(two, LevelPattern):
         return one.common(two)
     return None
-
-
-def _terms_overlap(one: _Ends, two: _Ends) -> bool:
-    both = [
-        a.common(b)
-        for a, b in zip(one, two, strict=True)
-        if isinstance(a, TermPattern) and isinstance(b, TermPattern)
-    ]
-    if any(part is None for part in both):
-        return False
-    if len(both) < 2 or both[0] is None or both[1] is None:
-        return True
-    return both[1].low == 1 or both[0].pairs_with(both[1])
-
-
-def _in_helium(selector: Selector, helium: HeliumSize) -> bool:
-    if not helium.n_max:
-        return False
-    upper, lower = selector.upper, selector.lower
-    if not isinstance(upper, TermPattern):
-        return True
-    if selector.process == "escape" or selector.to_ground:
-        top = min(helium.n_max, helium.resonance_to)
-        lines = [*_FORBIDDEN, (upper.low, 1, 0, None)] if upper.low <= top else [*_FORBIDDEN]
-        if not helium.intercombination:
-            lines.remove((2, 1, 1, 1))
-        return any(line_selected(upper, *line) for line in lines)
-    inside = upper.inside(helium.n_max)
-    if not isinstance(lower, TermPattern):
-        return inside.low <= inside.high
-    return inside.pairs_with(lower.inside(helium.n_max))
-
-
-def line_selected(pattern: TermPattern, n: int, l: int, spin: int, j: int | None) -> bool:
-    """Whether a pattern selects the line to the ground state from one term, or one J of it."""
-    if pattern.j not in {None, j}:
-        return False
-    ends = (np.array(number) for number in (n, l, spin))
-    return bool(pattern.matches(*ends))
 
 
 def _has_pair(upper: LevelPattern, lower: LevelPattern) -> bool:
@@ -292,7 +233,7 @@ def _species_of(upper: str, lower: str) -> tuple[str, str, str]:
 
 def _parsed(process: str, upper: str, lower: str, text: str, species: str) -> Selector:
     if species == "He I":
-        return _helium_selector(process, upper, lower, text)
+        return _existing(Selector(process, *term_patterns(process, upper, lower), text, species))
     if process == "bound_bound":
         if re.match(r"1(?!\d)", lower):
             raise InputError(
@@ -315,27 +256,6 @@ def _parsed(process: str, upper: str, lower: str, text: str, species: str) -> Se
         what = "allowed is 2s, or nothing" if process == "two_photon" else "leave it empty"
         raise InputError(f'upper = "{_short(upper)}": {process} has one rate; {what}')
     return Selector(process, None, None, text)
-
-
-def _helium_selector(process: str, upper: str, lower: str, text: str) -> Selector:
-    """Selector of He I from patterns without the species."""
-    if process == "two_photon":
-        if upper not in {"2 1S", ""} or lower:
-            raise InputError(f'upper = "He I {_short(upper)}": two_photon is of 2 1S alone')
-        return Selector(process, None, None, text, "He I")
-    above = parse_term("upper", upper)
-    if process == "bound_bound" and lower != GROUND_TERM:
-        if above.j is not None:
-            raise InputError(f'upper = "He I {upper}": only lines to {GROUND_TERM} tell J apart')
-        return _existing(Selector(process, above, parse_term("lower", lower), text, "He I"))
-    if process == "bound_bound":
-        ground = TermPattern(1, 1, 0, 0)
-        return _existing(Selector(process, above, ground, text, "He I"))
-    if lower:
-        raise InputError(f'lower = "{_short(lower)}": {process} takes none; leave it empty')
-    if process == "bound_free" and above.j is not None:
-        raise InputError(f'upper = "He I {upper}": only lines to {GROUND_TERM} tell J apart')
-    return _existing(Selector(process, above, None, text, "He I"))
 
 
 def check_exists(selector: Selector, atom: AtomSize, where: str) -> None:

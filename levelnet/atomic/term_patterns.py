@@ -1,15 +1,16 @@
 """Patterns of terms of He I, as selectors of rates have them.
 
-``2 3P`` is one term, ``2`` every term of n = 2, ``3-10``, ``3-*`` or ``*`` a range of n (``*``: every
-excited term), each with a multiplicity (1 or 3) and a letter or ``[l=25]`` behind a space where that
-is meant: ``3-* 1D``, ``* 3``, ``30 3[l=25]``. Lines to the ground state tell the levels J of 2 3P
-apart: ``2 3P1``, ``2 3P2``.
+``2 3P`` is one term, ``2`` every term of n = 2, ``3-10``, ``3-*`` or ``*`` a range of n (``*``:
+every excited term), each with a multiplicity (1 or 3) and a letter or ``[l=25]`` behind a space
+where that is meant: ``3-* 1D``, ``* 3``, ``30 3[l=25]``. Lines to the ground state tell the levels
+J of 2 3P apart: ``2 3P1``, ``2 3P2``.
 """
 
 from __future__ import annotations
 
 import re
 from dataclasses import dataclass
+from typing import NamedTuple
 
 import numpy as np
 
@@ -30,6 +31,34 @@ _FORMS = (
     "space where that is meant, as in 3-* 1D"
 )
 _LONGEST = 40
+
+
+class HeliumSize(NamedTuple):
+    """What helium has.
+
+    Attributes
+    ----------
+    n_max : int
+        Highest n; 0: helium is inert.
+    resonance_to : int
+        Highest n of n 1P whose line to 1 1S is open.
+    intercombination : bool
+        Whether 2 3P1-1 1S is on.
+    absorption : bool
+        Whether neutral hydrogen absorbs inside the lines.
+    ion : bool
+        Whether He II has levels.
+    """
+
+    n_max: int = 0
+    resonance_to: int = 2
+    intercombination: bool = True
+    absorption: bool = False
+    ion: bool = False
+
+
+# Terms besides n 1P from which lines go to the ground state, with their levels J.
+_FORBIDDEN = ((2, 0, 1, None), (2, 1, 1, 1), (2, 1, 1, 2))
 
 
 @dataclass(frozen=True, slots=True)
@@ -107,3 +136,69 @@ def parse_term(column: str, text: str) -> TermPattern:
     if j is not None and (low, high, l, spin) != (2, 2, 1, 1):
         raise InputError(f'{column} = "He I {text}": levels J are told apart of 2 3P alone')
     return TermPattern(low, high, spin, l, j)
+
+
+def terms_overlap(one: tuple[object, object], two: tuple[object, object]) -> bool:
+    """Whether some atom has a rate that both pairs of patterns, upper and lower, select."""
+    both = [
+        a.common(b)
+        for a, b in zip(one, two, strict=True)
+        if isinstance(a, TermPattern) and isinstance(b, TermPattern)
+    ]
+    if any(part is None for part in both):
+        return False
+    if len(both) < 2 or both[0] is None or both[1] is None:
+        return True
+    return both[1].low == 1 or both[0].pairs_with(both[1])
+
+
+def in_helium(process: str, upper: object, lower: object, helium: HeliumSize) -> bool:
+    """Whether helium has a rate of He I that patterns of terms select."""
+    if not isinstance(upper, TermPattern) or not helium.n_max:
+        return helium.n_max > 0
+    to_ground = isinstance(lower, TermPattern) and lower.low == 1
+    if process == "escape" or to_ground:
+        top = min(helium.n_max, helium.resonance_to)
+        lines = [*_FORBIDDEN, (upper.low, 1, 0, None)] if upper.low <= top else [*_FORBIDDEN]
+        if not helium.intercombination:
+            lines.remove((2, 1, 1, 1))
+        return any(line_selected(upper, *line) for line in lines)
+    inside = upper.inside(helium.n_max)
+    if not isinstance(lower, TermPattern):
+        return inside.low <= inside.high
+    return inside.pairs_with(lower.inside(helium.n_max))
+
+
+def line_selected(pattern: TermPattern, n: int, l: int, spin: int, j: int | None) -> bool:
+    """Whether a pattern selects the line to the ground state from one term, or one J of it."""
+    if pattern.j not in {None, j}:
+        return False
+    ends = (np.array(number) for number in (n, l, spin))
+    return bool(pattern.matches(*ends))
+
+
+def term_patterns(
+    process: str, upper: str, lower: str
+) -> tuple[TermPattern | None, TermPattern | None]:
+    """Patterns of the cells of a row of He I, without the species.
+
+    `lower` "1 1S" becomes a pattern of the ground state.
+    """
+    if process == "two_photon":
+        if upper not in {"2 1S", ""} or lower:
+            raise InputError(f'upper = "He I {upper[:_LONGEST]}": two_photon is of 2 1S alone')
+        return None, None
+    above = parse_term("upper", upper)
+    to_ground = process == "bound_bound" and lower == GROUND_TERM
+    if above.j is not None and not to_ground and process != "escape":
+        raise InputError(f'upper = "He I {upper}": only lines to {GROUND_TERM} tell J apart')
+    if to_ground:
+        return above, TermPattern(1, 1, 0, 0)
+    if process == "bound_bound":
+        below = parse_term("lower", lower)
+        if below.j is not None:
+            raise InputError(f'lower = "He I {lower}": only lines to {GROUND_TERM} tell J apart')
+        return above, below
+    if lower:
+        raise InputError(f'lower = "{lower[:_LONGEST]}": {process} takes none; leave it empty')
+    return above, None

@@ -96,8 +96,12 @@ def with_factors(
         blue = seen.blue
         if blue is not None:
             here = slice(line, line + 1)
-            parts = (part[here] for part in (blue.log_distortion, blue.slope, blue.by_continuum))
-            blue = HeliumBlueSide(*parts, blue.hubble_slope)
+            blue = HeliumBlueSide(
+                blue.log_distortion[here],
+                blue.slope[here],
+                blue.by_continuum[here],
+                blue.hubble_slope,
+            )
         alone = treatment.couple(only(lines, line), kept, conditions, seen._replace(blue=blue))
         coupling = plus(coupling, alone, float(factor[line]) - 1.0)
     return coupling

@@ -389,6 +389,7 @@ class HeliumEquations:
         return [scale * one for one in terms]
 
     def saha_pull(self, around: Around, b: float) -> list[float]:
+        """Rate of b that pulls it to Saha equilibrium, and its derivatives as in Rates."""
         matter_k = around.matter_temperature_k
         slope = -1.5 - self.ionization_ev[1] / (const.BOLTZMANN_EV_K * matter_k)
         pulled = self.saha_log_ratio(1, around) - b

@@ -13,8 +13,9 @@ from pydantic import Field
 
 from ..atomic.overrides import Override, Rates
 from ..atomic.physics import Physics, scales
-from ..atomic.selection import AtomSize, HeliumSize
+from ..atomic.selection import AtomSize
 from ..atomic.species import Helium, Hydrogen
+from ..atomic.term_patterns import HeliumSize
 from ..background.cosmology import Cosmology
 from ..errors import InputError
 from ..escape.frequency_step import (

@@ -91,6 +91,7 @@ def _signed(value: float) -> str:
 
 
 def sign_legend(figure: Figure) -> None:
+    """Say which bars are positive and which negative."""
     from matplotlib.patches import Patch
 
     signs = [

@@ -129,9 +129,9 @@ def uncertainties_in(setup: Setup, path: str | Path | None = None) -> tuple[Unce
         What will be weighed.
     path : str or Path, optional
         A file of one's own: InputError where a row selects nothing in the atom. None: the rows of
-        the default tables that apply; those of an escape say what one treatment leaves out, Sobolev's
-        of hydrogen and the continuum without diffusion of He I, and are left out themselves with any
-        other.
+        the default tables that apply; those of an escape say what one treatment leaves out,
+        Sobolev's of hydrogen and partial redistribution with the continuum of He I, and are left
+        out themselves with any other.
     """
     rows, atom = load_uncertainties(path), setup.atom_size
     if path is not None:

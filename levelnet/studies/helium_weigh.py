@@ -162,7 +162,10 @@ def _by_widths(
     upper = ladders.kept_position[lines.upper].tolist()
     position = others.position.tolist()
     row, column = np.nonzero(others.rate_per_s)
-    where = [place[frozenset((upper[i], position[k]))] for i, k in zip(row, column, strict=True)]
+    where = np.array(
+        [place[frozenset((upper[i], position[k]))] for i, k in zip(row, column, strict=True)],
+        dtype=np.int64,
+    )
     each = np.zeros((len(points.weights), len(row)))
     for (conditions, _), response, weight in zip(
         points.flowing, points.responses, points.weights.T, strict=True
@@ -171,7 +174,9 @@ def _by_widths(
             rates = others.each(conditions.radiation_temperature_k)
             share = response.others[:, None] * rates / rates.sum(axis=1, keepdims=True)
             each += np.outer(weight, share[row, column])
-    np.add.at(result, (slice(None), where), each)
+    # A line may lead to two upper levels, or to one of which two lines lead down.
+    for total, own in zip(result, each, strict=True):
+        np.add.at(total, where, own)
     return result
 
 

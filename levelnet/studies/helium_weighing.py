@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, fields, replace
-from typing import TypeVar
+from typing import Any, TypeVar
 
 import numpy as np
 
@@ -134,14 +134,15 @@ def first_of(part: Part | None, count: int) -> Part | None:
     """The same for the first `count` targets alone."""
     if part is None:
         return None
-    return replace(part, **{name: values[:count] for name, values in _by_target(part).items()})
+    cut: Any = {name: values[:count] for name, values in _by_target(part).items()}
+    return replace(part, **cut)
 
 
 def over(part: Part | None, value: FloatArray) -> Part | None:
     """Every derivative divided by `value`, shape (n_targets,)."""
     if part is None:
         return None
-    divided = {name: (values.T / value).T for name, values in _by_target(part).items()}
+    divided: Any = {name: (values.T / value).T for name, values in _by_target(part).items()}
     return replace(part, **divided)
 
 

@@ -218,7 +218,7 @@ def _assemble(
 def _adjoint(
     history: FrozenHistory, scalars: Scalars, tell: Progress
 ) -> tuple[FloatArray, Helium | None]:
-    """Weights of the rates of change, shape (n_scalars, n_points, n), and what helium makes of them."""
+    """Weights of the rates of change, shape (n_scalars, n_points, n), and what helium adds."""
     count, n_states = len(scalars.value), history.solution.start.size
     if history.equations.helium is None:
         weight, _ = adjoint(history.solution, scalars.by_state)
