@@ -25,8 +25,9 @@ SUMMARY = "weigh every rate: what each does to x_e(z) and the observables"
 DESCRIPTION = (
     "Solve a setup and give, for each target J, d ln J / d ln R for every rate R (each dipole "
     "transition, cross section, line escape, two-photon and Compton rate, and those of helium "
-    "where it has levels) and for each parameter of the cosmology, and the error that the uncertainties of the rates leave in J. Nothing is "
-    "written unless --output or --plot asks for it."
+    "where it has levels) and for each parameter of the cosmology, and the error that the "
+    "uncertainties of the rates leave in J. Nothing is written unless --output or --plot asks for "
+    "it."
 )
 EXAMPLE = 'levelnet weigh setup.toml --of "x_e(900)" --of "z_*" --output weights.h5'
 _BAND, _MOST = 24, 1000
