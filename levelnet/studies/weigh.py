@@ -137,8 +137,10 @@ def reach(
 def bytes_per_target(setup: Setup) -> float:
     """Memory that the derivatives of one target take: one of each line, twice for a while."""
     top, highest = setup.hydrogen.highest_resolved, setup.hydrogen.n_max
-    shells = highest - top
-    return 2.0 * 8.0 * (top**3 / 3.0 + shells * top**2 / 2.0 + shells**2)
+    shells, helium = highest - top, setup.helium.n_max if setup.helium_recombines else 0
+    # Singlets and triplets of He I, and He II.
+    rates = top**3 / 3.0 + shells * top**2 / 2.0 + shells**2 + helium**3
+    return 2.0 * 8.0 * rates
 
 
 def _check_memory_free(chosen: LineTreatment) -> None:

@@ -23,7 +23,7 @@ from levelnet.studies.frozen import freeze
 from levelnet.studies.helium_groups import helium_shares
 from levelnet.studies.targets import parse_target
 from levelnet.studies.weigh import reach, weigh
-from levelnet.studies.weigh_budget import weigh_with_budget
+from levelnet.studies.weigh_budget import budget_notes, weigh_with_budget
 from levelnet.studies.weighing import Weighing
 from tests.helium_differences import (
     GRID,
@@ -287,6 +287,22 @@ def test_weighing_in_parts_keeps_helium(monkeypatch: pytest.MonkeyPatch) -> None
     assert found.helium.escape.shape == (1, 4)
     assert found.helium_ion.two_photon.shape == (1,)
     assert found.budget is not None and len(found.budget.targets) == 2
+
+
+@pytest.mark.parametrize(
+    ("kind", "said"),
+    [
+        ("sobolev", "the H I continuum inside the lines of He I, is not in it"),
+        ("complete", 'the error of redistribution = "complete"'),
+        (WITH_FIELDS, "stands for diffusion in the line"),
+    ],
+)
+def test_notes_say_what_the_budget_of_helium_leaves_out(kind: str, said: str) -> None:
+    setup = lit_setup(kind)
+    notes = budget_notes(setup, uncertainties_in(setup))
+    assert sum(said in one for one in notes) == 1
+    inert = dataclasses.replace(setup, helium={"n_max": 0}, lines={})
+    assert not any("He I" in one for one in budget_notes(inert, uncertainties_in(inert)))
 
 
 def test_helium_in_saha_equilibrium_has_no_second_ion() -> None:
