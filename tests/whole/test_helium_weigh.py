@@ -107,7 +107,7 @@ def test_lines_and_fields_that_are_remembered(kind: str) -> None:
         lambda h: log_scalars(run, helium=with_absorption(helium, math.exp(h)))
     )
     compare(ours.absorption, by_absorption, "absorption")
-    assert (np.abs(ours.absorption[1]) > 1e-3) == (kind != "feedback")
+    assert (np.abs(ours.absorption).max() > 1e-3) == (kind != "feedback")
 
 
 @pytest.mark.slow
