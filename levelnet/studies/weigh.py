@@ -95,8 +95,9 @@ def weigh(
     -----
     J is that of the collocated history; it differs from :func:`levelnet.solve` by no more than
     ``setup.accuracy.relative``. Derivatives are exact to rounding for it, first order in the
-    change of a rate. The start in Saha equilibrium has no part in them: only the derivative of a
-    line strength by the temperature of the radiation misses 1e-6 by it.
+    change of a rate. Lines of He I that light one another hand weights back to the steps that they
+    remember. The start in Saha equilibrium has no part in derivatives: only that of a line strength
+    by the temperature of the radiation misses 1e-6 by it.
 
     References
     ----------
