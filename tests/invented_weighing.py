@@ -6,11 +6,16 @@ import dataclasses
 
 import numpy as np
 
+from levelnet.atomic.helium_levels import helium_levels
+from levelnet.atomic.helium_lines import helium_lines
+from levelnet.atomic.helium_transitions import helium_transitions
 from levelnet.atomic.levels import LevelSet, hydrogenic_levels
 from levelnet.errors import Outcome
 from levelnet.studies.budget_record import ErrorBudget
+from levelnet.studies.helium_weighing import HeliumWeights, IonWeights
 from levelnet.studies.weighing import Weighing
 from tests.invented_history import invented_setup
+from tests.small_helium import helium_setup
 from tests.small_runs import small_setup
 
 PARAMETERS = ("hubble_km_s_mpc", "baryon_density_h2", "matter_density_h2", "cmb_temperature_k")
@@ -136,3 +141,42 @@ def invented_budget(targets: tuple[str, ...] = ("x_e(900)", "z_*")) -> ErrorBudg
 def band_targets(count: int = 24) -> tuple[str, ...]:
     """Names of x_e at `count` redshifts from 1700 to 22."""
     return tuple(f"x_e({z:.6g})" for z in np.geomspace(1700.0, 22.0, count))
+
+
+def with_helium(weighing: Weighing, n_max: int = 3) -> Weighing:
+    """The same with invented derivatives by the rates of He I and He II."""
+    random, count = np.random.default_rng(11), len(weighing.targets)
+
+    def by(*shape: int) -> np.ndarray:
+        return random.normal(0.0, 1.0, shape) * 10.0 ** random.uniform(-5.0, -2.0, shape)
+
+    levels = helium_levels(n_max)
+    found = helium_transitions(helium_lines(levels))
+    names = ("2 3S-1 1S", "2 3P2-1 1S", "2 3P1-1 1S", "2 1P-1 1S")
+    ends = (2, 0, 1), (2, 1, 1), (2, 1, 1), (2, 1, 0)
+    helium = HeliumWeights(
+        levels,
+        found.upper,
+        found.lower,
+        names,
+        np.array([levels.index(*one) for one in ends]),
+        by(count, len(found.upper)),
+        by(count, len(levels)) * (levels.n > 1),
+        by(count, len(names)),
+        by(count, len(names)),
+        by(count),
+        by(count),
+    )
+    second = hydrogenic_levels(n_max, "nonrelativistic", 2)
+    upper, lower = dipole_pairs(second)
+    ion = IonWeights(
+        second,
+        upper,
+        lower,
+        1e-6 * by(count, len(upper)),
+        1e-6 * by(count, len(second)),
+        1e-6 * by(count),
+        1e-6 * by(count),
+    )
+    setup = helium_setup(n_max)
+    return dataclasses.replace(weighing, setup=setup, helium=helium, helium_ion=ion)

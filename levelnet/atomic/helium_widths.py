@@ -23,20 +23,29 @@ class OtherDecays:
         Rate per photon in the field: A of a line down, A g_above/g of a line up.
     spontaneous : ndarray, shape (n_upper, n_others), dimensionless
         1 for a line down, 0 for a line up.
+    position : ndarray of int, shape (n_others,), dimensionless
+        Of the other ends among the levels.
     """
 
     energy_ev: FloatArray
     rate_per_s: FloatArray
     spontaneous: FloatArray
+    position: IntArray
 
     def total(self, radiation_temperature_k: float) -> tuple[FloatArray, FloatArray]:
         """Rates out of each level in a blackbody, and their slopes by ln T_r, s^-1."""
         exponent = self.energy_ev / (const.BOLTZMANN_EV_K * radiation_temperature_k)
         inverse = 1.0 / -np.expm1(-exponent)
         photons = np.exp(-exponent) * inverse
-        rate = np.sum(self.rate_per_s * (self.spontaneous + photons), axis=1)
         slope = np.sum(self.rate_per_s * exponent * photons * inverse, axis=1)
-        return rate, slope
+        return self.each(radiation_temperature_k).sum(axis=1), slope
+
+    def each(self, radiation_temperature_k: float) -> FloatArray:
+        """Rates out of each level by every line, s^-1; shape (n_upper, n_others)."""
+        exponent = self.energy_ev / (const.BOLTZMANN_EV_K * radiation_temperature_k)
+        photons = np.exp(-exponent) / -np.expm1(-exponent)
+        rates: FloatArray = self.rate_per_s * (self.spontaneous + photons)
+        return rates
 
 
 def other_decays(lines: HeliumLines, upper: IntArray) -> OtherDecays:
@@ -67,4 +76,5 @@ def other_decays(lines: HeliumLines, upper: IntArray) -> OtherDecays:
                 gap[row, other] = abs(energy[level] - energy[other])
                 rate[row, other], spontaneous[row, other] = down + up, float(down > 0.0)
     used = rate.any(axis=0)
-    return OtherDecays(gap[:, used], rate[:, used], spontaneous[:, used])
+    position = np.flatnonzero(used)
+    return OtherDecays(gap[:, used], rate[:, used], spontaneous[:, used], position)

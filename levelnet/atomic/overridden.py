@@ -11,7 +11,7 @@ from ..arrays import BoolArray, FloatArray, IntArray
 from .bound_bound import DipoleBlocks
 from .bound_free import BoundFree
 from .overrides import Override
-from .selection import Selector
+from .selection import LevelPattern, Selector
 
 
 def with_overrides(
@@ -68,9 +68,12 @@ def transition_factors(
 def _pairs(
     selector: Selector, n: IntArray, l: IntArray, n_lower: IntArray, l_lower: IntArray
 ) -> BoolArray:
-    if selector.process != "bound_bound" or selector.upper is None or selector.lower is None:
+    upper, lower = selector.upper, selector.lower
+    if selector.process != "bound_bound" or not (
+        isinstance(upper, LevelPattern) and isinstance(lower, LevelPattern)
+    ):
         return np.zeros(np.broadcast_shapes(*map(np.shape, (n, l, n_lower, l_lower))), np.bool_)
-    chosen = selector.upper.matches(n, l) & selector.lower.matches(n_lower, l_lower)
+    chosen = upper.matches(n, l) & lower.matches(n_lower, l_lower)
     return np.asarray(chosen & (np.asarray(n) > n_lower))
 
 
@@ -99,7 +102,7 @@ def _shell(
     l = np.arange(n) if n <= resolve_l_to else np.full(n, -1)
     factor = np.ones(n)
     for one in overrides:
-        if one.selector.upper is not None:
+        if isinstance(one.selector.upper, LevelPattern):
             factor[one.selector.upper.matches(np.full(n, n), l)] *= one.factor
     if np.all(factor == 1.0):
         return sigma

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 from functools import lru_cache
 from typing import Annotated
@@ -120,30 +121,69 @@ class Rates:
 
     @property
     def network(self) -> tuple[Override, ...]:
-        """Overrides of lines among excited levels and of their photoionization."""
-        return tuple(one for one in self.table if one.selector.process in _NETWORK)
+        """Overrides of hydrogen's lines among excited levels and of their photoionization."""
+        return self.network_of("H I")
+
+    def network_of(self, species: str) -> tuple[Override, ...]:
+        """The same of "H I", "He I" or "He II"."""
+        of = self._of(species)
+        return tuple(
+            one for one in of if one.selector.process in _NETWORK and not one.selector.to_ground
+        )
+
+    def _of(self, species: str) -> list[Override]:
+        return [one for one in self.table if one.selector.species == species]
 
     @property
     def compton_factor(self) -> float:
         """Factor on the Compton rate, dimensionless."""
-        return next((o.factor for o in self.table if o.selector.process == "compton"), 1.0)
+        return self._single("compton")
 
-    def two_photon_rate_per_s(self, computed_per_s: float) -> float:
-        """2s-1s rate in s^-1 in place of the computed one."""
-        for one in self.table:
+    @property
+    def absorption_factor(self) -> float:
+        """Factor on the cross section of H I 1s inside the lines of He I, dimensionless."""
+        return self._single("absorption")
+
+    def _single(self, process: str) -> float:
+        return next((o.factor for o in self.table if o.selector.process == process), 1.0)
+
+    def two_photon_rate_per_s(self, computed_per_s: float, species: str = "H I") -> float:
+        """2s-1s rate, of He I that of 2 1S, in s^-1 in place of the computed one."""
+        for one in self._of(species):
             if one.selector.process == "two_photon":
                 return computed_per_s * one.factor if one.value_per_s is None else one.value_per_s
         return computed_per_s
 
     def escape_factors(self, n_upper: IntArray) -> FloatArray | None:
         """Factor on the escape of each Lyman line np-1s, shape of `n_upper`; None: all are 1."""
-        chosen = [one for one in self.table if one.selector.process == "escape"]
+        return self._escape_factors("H I", n_upper)
+
+    def ion_escape_factor(self) -> float:
+        """Factor on the escape of 2p-1s of He II, dimensionless."""
+        found = self._escape_factors("He II", np.array([2]))
+        return 1.0 if found is None else float(found[0])
+
+    def _escape_factors(self, species: str, n_upper: IntArray) -> FloatArray | None:
+        chosen = [one for one in self._of(species) if one.selector.process == "escape"]
         if not chosen:
             return None
         factor = np.ones(len(n_upper))
         for one in chosen:
             factor[line_mask(one.selector, n_upper)] *= one.factor
         return factor
+
+    def ground_line_factors(self, lines: Sequence[str], process: str) -> FloatArray | None:
+        """Factors on lines of He I to 1 1S, shape (n_lines,); None: all are 1.
+
+        `process` is "bound_bound", on their Einstein A, or "escape", on their net flow.
+        """
+        from .helium_selection import ground_line_mask
+
+        factor = np.ones(len(lines))
+        for one in self._of("He I"):
+            if one.selector.process == process:
+                factor[ground_line_mask(one.selector, lines)] *= one.factor
+        return None if np.all(factor == 1.0) else factor
 
 
 @lru_cache(maxsize=64)
@@ -196,6 +236,11 @@ def _factor_of(row: SelectorRow, value_per_s: float) -> float:
             )
         return 1.0
     name = row.selector.transition
+    if name is None and row.selector.species != "H I":
+        raise InputError(
+            f"{row.where}: value_per_s: rates of {row.selector.species} but those of two_photon "
+            "take a factor"
+        )
     if name is None:
         raise InputError(
             f"{row.where}: value_per_s needs a selector of one transition, such as bound_bound 3d "

@@ -24,9 +24,10 @@ NAME = "weigh"
 SUMMARY = "weigh every rate: what each does to x_e(z) and the observables"
 DESCRIPTION = (
     "Solve a setup and give, for each target J, d ln J / d ln R for every rate R (each dipole "
-    "transition, cross section, line escape, two-photon and Compton rate) and for each parameter "
-    "of the cosmology, and the error that the uncertainties of the rates leave in J. Nothing is "
-    "written unless --output or --plot asks for it."
+    "transition, cross section, line escape, two-photon and Compton rate, and those of helium "
+    "where it has levels) and for each parameter of the cosmology, and the error that the "
+    "uncertainties of the rates leave in J. Nothing is written unless --output or --plot asks for "
+    "it."
 )
 EXAMPLE = 'levelnet weigh setup.toml --of "x_e(900)" --of "z_*" --output weights.h5'
 _BAND, _MOST = 24, 1000
@@ -88,7 +89,7 @@ def run(options: argparse.Namespace, console: Console) -> int:
     asked = [parse_target(text).name for text in options.of or default_targets(setup)]
     targets = tuple(dict.fromkeys(asked))
     band = tuple(band_targets(setup, _band(options)))
-    _check_places(options, targets, (*targets, *band))
+    _check_places(options, targets, (*targets, *band), setup.helium_recombines)
     start = time.monotonic()
     weighing = _weighed(setup, targets, band, options, console)
     seconds = time.monotonic() - start
@@ -122,7 +123,7 @@ def _band(options: argparse.Namespace) -> int:
 
 
 def _check_places(
-    options: argparse.Namespace, targets: tuple[str, ...], every: tuple[str, ...]
+    options: argparse.Namespace, targets: tuple[str, ...], every: tuple[str, ...], helium: bool
 ) -> None:
     """Refuse what cannot be written before any work starts."""
     if options.output is not None:
@@ -137,7 +138,7 @@ def _check_places(
         # The budget of x_e at several redshifts is drawn as a band.
         electrons = [name for name in every if parse_target(name).kind == "x_e"]
         band = not options.no_budget and len(electrons) > 1
-        check_free(figure_paths(targets, band, options.plot), options.force)
+        check_free(figure_paths(targets, band, options.plot, helium), options.force)
 
 
 def default_targets(setup: Setup) -> list[str]:

@@ -29,7 +29,7 @@ def weighing_summary(weighing: Weighing, top: int) -> str:
             "weighing",
             f"setup {setup.digest}: hydrogen n_max = {setup.hydrogen.n_max} "
             f"({values['n_levels']} levels, {values['n_transitions']} dipole transitions), "
-            f"lines {setup.lines.hydrogen}",
+            f"lines {setup.lines.hydrogen}{_helium_size(weighing)}",
         ),
         row("outcome", weighing.outcome.value),
         row("numbers", "d ln J / d ln R for each target J and rate R, the other rates held"),
@@ -41,6 +41,16 @@ def weighing_summary(weighing: Weighing, top: int) -> str:
     return "\n".join([*lines, *(row("note", text) for text in weighing.notes)])
 
 
+def _helium_size(weighing: Weighing) -> str:
+    if weighing.helium is None:
+        return ""
+    setup = weighing.setup
+    return (
+        f"; helium n_max = {setup.helium.n_max} ({len(weighing.helium.levels)} terms of He I, "
+        f"{len(weighing.helium.upper)} dipole transitions), lines {setup.lines.helium or 'sobolev'}"
+    )
+
+
 def _target_tables(targets: list[dict[str, Any]], top: int) -> list[str]:
     """Tables of a few targets side by side."""
     head = ["", *(one["target"] for one in targets)]
@@ -48,6 +58,8 @@ def _target_tables(targets: list[dict[str, Any]], top: int) -> list[str]:
     for part in ("processes", "parameters"):
         names = list(targets[0][part])
         body += [[name, *(_number(one[part][name]) for one in targets)] for name in names]
+        if part == "processes":
+            body += _helium_processes(targets)
     lines = ["", *aligned([head, *body])]
     for title, ranked in (
         (f"dipole transitions, largest {top}", [_named(one["top"]) for one in targets]),
@@ -66,8 +78,46 @@ def _target_tables(targets: list[dict[str, Any]], top: int) -> list[str]:
         ),
     ):
         lines += _ranked_table(title, head, ranked)
+    lines += _helium_tables(head, [one["helium"] for one in targets], top)
     if all(one["budget"] is not None for one in targets):
         lines += _budget_table(head, [one["budget"] for one in targets])
+    return lines
+
+
+def _helium_processes(targets: list[dict[str, Any]]) -> list[list[str]]:
+    """Rows of the processes of He I and He II, where they were weighed."""
+    rows = []
+    for part, species in (("helium", "He I"), ("helium_ion", "He II")):
+        if targets[0][part] is not None:
+            found = [one[part]["processes"] for one in targets]
+            rows += [
+                [f"{species} {name}", *(_number(one[name]) for one in found)] for name in found[0]
+            ]
+    return rows
+
+
+def _helium_tables(head: list[str], targets: list[dict[str, Any] | None], top: int) -> list[str]:
+    """Lines to 1 1S, groups, transitions and cross sections of He I."""
+    found = [one for one in targets if one is not None]
+    if not found:
+        return []
+    lines: list[str] = []
+    for title, part in (
+        ("He I lines to 1 1S, by Einstein A", "strength"),
+        ("He I lines to 1 1S, by escape", "escape"),
+    ):
+        rows = [
+            [name, *(_number(one["lines"][name][part]) for one in found)]
+            for name in found[0]["lines"]
+        ]
+        lines += ["", title, *aligned([head, *rows])]
+    rows = [[name, *(_number(one["groups"][name]) for one in found)] for name in found[0]["groups"]]
+    lines += ["", "He I groups", *aligned([head, *rows])]
+    for title, part in (
+        (f"He I dipole transitions, largest {top}", "top"),
+        (f"He I cross sections of terms, largest {top}", "top_levels"),
+    ):
+        lines += _ranked_table(title, head, [_named(one[part]) for one in found])
     return lines
 
 

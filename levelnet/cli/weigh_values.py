@@ -52,8 +52,36 @@ def target_values(weighing: Weighing, target: str, top: int) -> dict[str, Any]:
         ],
         "shells": _shares(by_shell(weighing, target)),
         "l": _shares(by_l(weighing, target)),
+        "helium": helium_values(weighing, at, top),
+        "helium_ion": _ion_values(weighing, at),
         "budget": budget_values(weighing.budget, target),
     }
+
+
+def helium_values(weighing: Weighing, at: int, top: int) -> dict[str, Any] | None:
+    """Derivatives of one target by the rates of He I; None where helium is inert."""
+    from ..studies.helium_groups import (
+        helium_shares,
+        line_weights,
+        top_helium_transitions,
+        top_terms,
+    )
+
+    helium = weighing.helium
+    if helium is None:
+        return None
+    return {
+        "processes": helium.processes(at),
+        "lines": line_weights(helium, at),
+        "groups": helium_shares(helium, at),
+        "top": [one._asdict() for one in top_helium_transitions(helium, at, top)],
+        "top_levels": [one._asdict() for one in top_terms(helium, at, top)],
+    }
+
+
+def _ion_values(weighing: Weighing, at: int) -> dict[str, Any] | None:
+    ion = weighing.helium_ion
+    return None if ion is None else {"processes": ion.processes(at)}
 
 
 def _shares(shares: Shares) -> dict[str, Any]:

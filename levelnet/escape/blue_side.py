@@ -116,15 +116,27 @@ class Past:
 
     def at(self, time: float, line: int) -> tuple[float, float]:
         """Of one line: the cubic through the four nearest remembered steps, and its slope."""
-        first = min(max(0, bisect_right(self.time, time) - 2), max(0, len(self.time) - 4))
-        knots = self.time[first : first + 4]
+        first, weights, rises = self.knots(time)
         value = slope = 0.0
-        for k, knot in enumerate(knots):
-            others = [other for j, other in enumerate(knots) if j != k]
-            weight, rise = 1.0, 0.0
-            for other in others:
-                rise = (rise * (time - other) + weight) / (knot - other)
-                weight *= (time - other) / (knot - other)
+        for k, (weight, rise) in enumerate(zip(weights, rises, strict=True)):
             red = float(self.red[first + k][line])
             value, slope = value + weight * red, slope + rise * red
         return value, slope
+
+    def knots(self, time: float) -> tuple[int, list[float], list[float]]:
+        """First of the four nearest remembered steps; what each counts in value and in slope."""
+        first = min(max(0, bisect_right(self.time, time) - 2), max(0, len(self.time) - 4))
+        knots = self.time[first : first + 4]
+        weights, rises = [], []
+        for k, knot in enumerate(knots):
+            weight, rise = 1.0, 0.0
+            for other in (other for j, other in enumerate(knots) if j != k):
+                rise = (rise * (time - other) + weight) / (knot - other)
+                weight *= (time - other) / (knot - other)
+            weights.append(weight)
+            rises.append(rise)
+        return first, weights, rises
+
+    def until(self, count: int) -> Past:
+        """What was remembered after the first `count` steps."""
+        return Past(self.delay, self.time[:count], self.red[:count])

@@ -23,12 +23,15 @@ _THICK = 1e3
 
 
 class _Shapes(NamedTuple):
-    """Voigt parameter and incoherent fraction of each line, and their slopes by ln T_r."""
+    """Voigt parameter and incoherent fraction of each line, and their slopes.
+
+    By ln T_r; by ln of the rate to the ground state and of the other decays of the upper level.
+    """
 
     damping: FloatArray
-    damping_slope: FloatArray
+    damping_slopes: FloatArray  # (3, n_lines)
     incoherent: FloatArray
-    incoherent_slope: FloatArray
+    incoherent_slopes: FloatArray  # (3, n_lines)
 
 
 @dataclass(frozen=True, slots=True)
@@ -86,52 +89,68 @@ class HeliumContinuum(HeliumTreatment):
         per_log = continuum_depth(lines, neutral_hydrogen_cm3, conditions.hubble_rate_per_s)
         shape = self._shapes(lines, conditions)
         continuum = per_log * width
-        columns = (optical_depth, continuum, *shape)
-        found = [self._chance(*one) for one in np.stack(columns, axis=1).tolist()]
-        value, by_depth, by_continuum, by_shape = np.array(found).reshape(-1, 4).T
+        found = [
+            self._chance(*one, shape.damping_slopes[:, k], shape.incoherent_slopes[:, k])
+            for k, one in enumerate(
+                zip(
+                    optical_depth.tolist(),
+                    continuum.tolist(),
+                    shape.damping.tolist(),
+                    shape.incoherent.tolist(),
+                    strict=True,
+                )
+            )
+        ]
+        chances = np.array(found).reshape(-1, 6).T
+        value, by_depth, by_continuum, by_shape, by_ground, by_others = chances
         validity = {
             "continuum_depth": continuum,
             "damping": shape.damping,
             "incoherent_fraction": shape.incoherent,
         }
         # The Doppler width goes as the square root of T.
-        return Chances(value, by_depth, by_continuum, 0.5 * by_continuum + by_shape, validity)
+        by_temperature = 0.5 * by_continuum + by_shape
+        return Chances(
+            value, by_depth, by_continuum, by_temperature, validity, by_ground, by_others
+        )
 
     def _chance(
         self,
         depth: float,
         continuum: float,
         damping: float,
-        damping_slope: float,
         incoherent: float,
-        incoherent_slope: float,
-    ) -> tuple[float, float, float, float]:
-        """P of one line, its derivatives by ln tau and ln c, and by ln T through the shape."""
+        damping_slopes: FloatArray,
+        incoherent_slopes: FloatArray,
+    ) -> tuple[float, ...]:
+        """P of one line, its derivatives by ln tau and ln c, and those through the shape."""
         natural = damping / incoherent
         if not self.diffusion or depth * incoherent < _THICK or natural > LARGEST_DAMPING:
             plain = continuum_escape(depth, continuum, damping)
-            return (*plain[:3], plain.by_damping * damping_slope)
+            return (*plain[:3], *(plain.by_damping * damping_slopes).tolist())
         moved, by_incoherent = diffusive_escape(depth, continuum, natural, incoherent)
-        natural_slope = (damping_slope - natural * incoherent_slope) / incoherent
-        by_shape = moved.by_damping * natural_slope + by_incoherent * incoherent_slope
-        return (*moved[:3], by_shape)
+        natural_slopes = (damping_slopes - natural * incoherent_slopes) / incoherent
+        by_shape = moved.by_damping * natural_slopes + by_incoherent * incoherent_slopes
+        return (*moved[:3], *by_shape.tolist())
 
     def _shapes(self, lines: HeliumGroundLines, conditions: Conditions) -> _Shapes:
         radiation_k = conditions.radiation_temperature_k
-        other, slope = lines.others.total(radiation_k)
-        total = lines.ground_rate_per_s + other
-        incoherent, turn = other / total, slope * lines.ground_rate_per_s / total**2
+        ground, (other, slope) = lines.ground_rate_per_s, lines.others.total(radiation_k)
+        total, nothing = ground + other, np.zeros_like(other)
+        incoherent, turn = other / total, ground * other / total**2
+        turns = np.stack([slope * ground / total**2, -turn, turn])
         if self.redistribution == "doppler":
-            nothing = np.zeros_like(total)
-            return _Shapes(nothing, nothing, incoherent, turn)
+            return _Shapes(nothing, np.zeros_like(turns), incoherent, turns)
         frequency = lines.energy_ev / const.PLANCK_EV_S
         scale = 1.0 / (4.0 * np.pi * frequency * doppler_width(radiation_k))
-        rate = total if self.redistribution == "complete" else other
-        damping, by = rate * scale, (slope - 0.5 * rate) * scale
+        whole = self.redistribution == "complete"
+        rate = total if whole else other
+        slopes = np.stack([slope - 0.5 * rate, ground if whole else nothing, other])
+        damping, by = rate * scale, slopes * scale
         # Reached below 30 K alone, where no helium is left to recombine.
         beyond = damping > LARGEST_DAMPING
         damping, by = np.where(beyond, LARGEST_DAMPING, damping), np.where(beyond, 0.0, by)
-        return _Shapes(damping, by, incoherent, turn)
+        return _Shapes(damping, by, incoherent, turns)
 
 
 def doppler_width(temperature_k: float) -> float:

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Literal, get_args
 
 import numpy as np
@@ -18,6 +18,7 @@ from ..atomic.physics import Physics, scales
 from ..atomic.species import INTERCOMBINATION_PER_S
 from ..errors import InputError
 from ..network.helium import HeliumLadders, KeptTerms
+from .lines import HIGHEST_FED
 from .treatment import ResonanceLines
 
 HigherLines = Literal["free", "closed", "feedback"]
@@ -25,9 +26,6 @@ HigherLines = Literal["free", "closed", "feedback"]
 line (A P does not depend on n), so that no history converges with n_max; none escapes; or each is
 lit by the next line above, which takes back nearly all that it lets go."""
 
-# Highest n 1P whose line takes part in "feedback". The photons of 8 1P reach 7 1P within 0.0026 in
-# ln a; steps would have to be as short, so 8 1P and above are closed.
-HIGHEST_FED = 7
 # Lines closer than this in ln nu are one line to what comes from above: 2 3P1 and 2 3P2 are 5e-7
 # apart, a hundredth of their Doppler width; 7 1P and 6 1P 4e-3.
 _SAME_LINE = 1e-4
@@ -123,10 +121,10 @@ def helium_ground_lines(
     rate = ground.rate_per_s[use] * [factor.line_to_ground(ground.kind[i]) for i in use]
     n = ladders.levels.n[level]
     others = other_decays(ladders.lines, level)
-    others = OtherDecays(
-        others.energy_ev * factor.energy,
-        others.rate_per_s * factor.line_rate,
-        others.spontaneous,
+    others = replace(
+        others,
+        energy_ev=others.energy_ev * factor.energy,
+        rate_per_s=others.rate_per_s * factor.line_rate,
     )
     spontaneous = np.sum(others.rate_per_s * others.spontaneous, axis=1)
     hydrogen_chi_ev = const.RYDBERG_EV * reduced_mass_ratio(1) * hydrogen.energy
@@ -142,6 +140,17 @@ def helium_ground_lines(
         others,
         cross_section * hydrogen.cross_section,
         _lit_by(np.log(energy), n, feedback, higher == "feedback"),
+    )
+
+
+def with_strengths(lines: HeliumGroundLines, factor: FloatArray) -> HeliumGroundLines:
+    """The same with the Einstein A of each line times `factor`, shape (n_lines,), dimensionless."""
+    more = (factor - 1.0) * lines.ground_rate_per_s
+    return replace(
+        lines,
+        einstein_a_per_s=factor * lines.einstein_a_per_s,
+        ground_rate_per_s=lines.ground_rate_per_s + more,
+        decay_rate_per_s=lines.decay_rate_per_s + more,
     )
 
 

@@ -31,12 +31,17 @@ class HeliumBlueSide(NamedTuple):
         d ln u/d ln n_HI.
     hubble_slope : float
         d ln H/d ln a.
+    by_sent, by_past_continuum : ndarray, dimensionless, or None
+        d ln u/d ln of what the line above sent, and of the depth of the continuum there and then;
+        None: not asked for.
     """
 
     log_distortion: FloatArray
     slope: FloatArray
     by_continuum: FloatArray
     hubble_slope: float
+    by_sent: FloatArray | None = None
+    by_past_continuum: FloatArray | None = None
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -89,25 +94,31 @@ class HeliumPast:
         continuum : ndarray, shape (n_lines,), or None
             Depth of the H I continuum per ln nu at each line, now; None: nothing absorbs.
         """
-        value, slope, by = np.zeros((3, len(self.lines.names)))
+        value, slope, by, by_sent, by_past = np.zeros((5, len(self.lines.names)))
         for line, above in enumerate(self.lines.lit_by.tolist()):
             delay = float(self.red.delay[line])
             then = time - delay
             if above < 0 or not self.red.time or then <= self.red.time[0]:
                 continue
             value[line], slope[line] = self.red.at(then, above)
+            by_sent[line] = 1.0
             if continuum is not None:
                 past = self.continuum.at(then, above)
                 now = math.log(max(float(continuum[line]), 1e-300)), -3.0 - hubble_slope
                 sent = value[line], slope[line]
-                value[line], slope[line], by[line] = _attenuated(delay, past, now, sent)
-        return HeliumBlueSide(value, slope, by, hubble_slope)
+                left = _attenuated(delay, past, now, sent)
+                value[line], slope[line], by[line], by_past[line], by_sent[line] = left
+        return HeliumBlueSide(value, slope, by, hubble_slope, by_sent, by_past)
+
+    def until(self, count: int) -> HeliumPast:
+        """What was remembered after the first `count` steps."""
+        return HeliumPast(self.lines, self.red.until(count), self.continuum.until(count))
 
 
 def _attenuated(
     delay: float, past: tuple[float, float], now: tuple[float, float], sent: tuple[float, float]
-) -> tuple[float, float, float]:
-    """Ln u after the continuum, its slope in ln a, and by ln n_HI now.
+) -> tuple[float, float, float, float, float]:
+    """Ln u after the continuum, its slope in ln a, and by ln n_HI now, by ln n_HI then, by `sent`.
 
     `past` and `now` are ln of the depth per ln nu and its slope in ln a, `sent` that of u.
     """
@@ -126,4 +137,4 @@ def _attenuated(
     of_sent = math.exp(left - value)
     by_depth = math.exp(-depth - value) - of_sent
     slope = of_sent * sent[1] + by_depth * delay * (by_end * now[1] + by_start * past[1])
-    return value, slope, by_depth * delay * by_end
+    return value, slope, by_depth * delay * by_end, by_depth * delay * by_start, of_sent

@@ -53,6 +53,9 @@ class Chances(NamedTuple):
         P, and by ln of tau, of the depth of the continuum per ln nu, and of T_r.
     validity : mapping of str to ndarray
         Figures per line.
+    by_ground_rate, by_other_decays : ndarray, dimensionless, or None
+        By ln of the rate to the ground state and of all other decays of the upper level, tau held:
+        through the natural width and the incoherent fraction; None where neither counts.
     """
 
     value: FloatArray
@@ -60,6 +63,8 @@ class Chances(NamedTuple):
     by_continuum: FloatArray
     by_temperature: FloatArray
     validity: dict[str, FloatArray]
+    by_ground_rate: FloatArray | None = None
+    by_other_decays: FloatArray | None = None
 
 
 @dataclass(frozen=True, slots=True)

@@ -10,6 +10,10 @@ RAMAN_LEVELS = ((2, 0), (3, 0), (3, 2))
 """(n, l) of the levels with Raman scattering; higher ones have far smaller populations."""
 TWO_PHOTON_N_MAX = 10
 """Highest n of ns and nd levels whose two-photon spectra are known."""
+HIGHEST_FED = 7
+"""Highest n 1P of He I whose line to 1 1S takes part in `helium_higher_lines` = "feedback": photons
+of 8 1P reach 7 1P within 0.0026 in ln a; steps would have to be as short, so 8 1P and above are
+closed."""
 COARSEST_STEP = 0.002
 """Widest frequency step: a line and the next one up must stay many cells apart."""
 

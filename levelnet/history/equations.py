@@ -15,7 +15,7 @@ T_m by (dx_e/dt) / [(1 + f_He + x_e)(Gamma + 2H)], is 2.6e-5 near z = 880 and 1e
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any, NamedTuple
 
 import numpy as np
@@ -210,6 +210,12 @@ class SlowEquations:
         radiation_k = self.cosmology.radiation_temperature_k(math.expm1(-log_scale))
         return min(own, self.helium.longest_step(float(radiation_k)))
 
+    def forgetful(self) -> SlowEquations:
+        """The same with nothing remembered yet of lines."""
+        helium = None if self.helium is None else self.helium.forgetful()
+        past = None if self.past is None else self.past.until(0)
+        return replace(self, past=past, helium=helium)
+
     def remember(self, log_scale: float, state: FloatArray) -> None:
         """Keep what an accepted step sends to the lines below, if the treatment asks for it."""
         if self.helium is not None:
@@ -316,7 +322,7 @@ class SlowEquations:
         )
         drift = np.array([scale * by_time, cooling * (-4.0 - hubble_slope)])
         rate = self._rate_of(here, state)
-        electrons = self._electrons_by(c, state)
+        electrons = self.electrons_by(c, state)
         if self.helium is None:
             matrix = own + np.outer(by_electrons, electrons)
             return Linearized(here, rate, matrix, drift, gradient, slopes)
@@ -336,8 +342,8 @@ class SlowEquations:
             slopes,
         )
 
-    def _electrons_by(self, c: Conditions, state: FloatArray) -> FloatArray:
-        """Derivatives of ln n_e by the state."""
+    def electrons_by(self, c: Conditions, state: FloatArray) -> FloatArray:
+        """Derivatives of ln n_e by the state, dimensionless."""
         hydrogen = c.ionized_fraction * c.ground_fraction / c.electron_fraction
         if self.helium is None:
             return np.array([hydrogen, 0.0])

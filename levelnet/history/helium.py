@@ -16,7 +16,7 @@ atom's energies, where constants are changed) both stand still.
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any, NamedTuple
 
 import numpy as np
@@ -29,9 +29,10 @@ from ..background.conditions import Conditions
 from ..escape.blue_side import log_red_side
 from ..escape.helium_continuum import continuum_depth
 from ..escape.helium_past import HeliumPast
+from ..escape.helium_shares import with_factors
 from ..escape.helium_treatment import HeliumTreatment, Seen
 from ..escape.treatment import LineTreatment, ResonanceLines
-from ..network.coupling import GroundCoupling, with_decay
+from ..network.coupling import GroundCoupling, with_decay, with_line_factors
 from ..network.gradient import FlowGradient, flow_slopes, net_flow_gradient
 from ..network.reduced import Reduced
 from ..network.solve import log_boltzmann_populations, solve_kept
@@ -43,11 +44,11 @@ COLDEST_K = 1400.0
 
 # Pull to Saha equilibrium in Hubble rates, and ln of x_HeIII/x_HeII between which it takes over
 # from the levels of He II, which would only ask for short steps.
-_PULL, _GONE, _FADING = 1e9, -50.0, -40.0
+PULL, GONE, FADING = 1e9, -50.0, -40.0
 # An ion whose share has this ln may be less exact, by a factor whose ln is at most the second.
 _RARE, _SLACK = math.log(1e-9), math.log(1e3)
 # From so far above COLDEST_K, in ln T_r, rates fade to nothing.
-_EBB = 0.05
+EBB = 0.05
 ION_WEIGHT = 2.0  # of He+ in its ground state
 
 
@@ -174,6 +175,8 @@ class IonNetwork:
         Its spontaneous rate.
     stimulation : ChebyshevSeries or None
         Ln of the factor by which the blackbody speeds it up, over ln T_r; None: not at all.
+    escape_factor : ndarray, shape (n_lines,), dimensionless, or None
+        Overrides of the escape of each line; None: none.
     """
 
     reduced: Reduced
@@ -182,6 +185,7 @@ class IonNetwork:
     decay: int
     decay_rate_per_s: float
     stimulation: ChebyshevSeries | None = None
+    escape_factor: FloatArray | None = None
 
     def solve(self, conditions: Conditions, seen: Seen | None = None) -> Local:
         """Kept levels at these conditions; densities and fractions are those of the element.
@@ -200,8 +204,11 @@ class IonNetwork:
         treatment: Any = self.treatment  # He I takes lines of its own, and what they see
         if seen is None:
             lines = treatment.couple(self.lines, kept, conditions)
+            if self.escape_factor is not None:
+                lines = with_line_factors(lines, self.lines.upper, self.escape_factor)
         else:
-            lines = treatment.couple(self.lines, kept, conditions, seen)
+            found: Any = self.lines
+            lines = with_factors(treatment, found, kept, conditions, seen, self.escape_factor)
         log_boltzmann = log_boltzmann_populations(
             kept, conditions.radiation_temperature_k, conditions.ground_fraction
         )
@@ -319,18 +326,18 @@ class HeliumEquations:
         full, _ = self._fading(around)
         if full == 0.0:
             return np.zeros(2)
-        seen = self._seen(around)
+        seen = self.seen(around)
         first = self.first.net_flow(around, x.single, x.neutral, seen)
         by_first = -first / (around.hubble_rate_per_s * x.neutral * x.charged)
         return full * np.array([by_first, self._upper_rate(around, x, float(state[1]), first)])
 
     def _fading(self, around: Around) -> tuple[float, float]:
-        """How much of the rates is left near `coldest_k`, and its slope by ln T_r times _EBB."""
-        return _ramp(math.log(around.radiation_temperature_k / self.coldest_k) / _EBB)
+        """How much of the rates is left near `coldest_k`, and its slope by ln T_r times EBB."""
+        return ramp(math.log(around.radiation_temperature_k / self.coldest_k) / EBB)
 
     def _upper_rate(self, around: Around, x: HeliumFractions, b: float, first: float) -> float:
-        part, _ = _ramp((b - _GONE) / (_FADING - _GONE))
-        pulled = _PULL * (self.saha_log_ratio(1, around) - b)
+        part, _ = ramp((b - GONE) / (FADING - GONE))
+        pulled = PULL * (self.saha_log_ratio(1, around) - b)
         if self.second is None or part == 0.0:
             return pulled
         second = self.second.net_flow(around, x.double, x.single)
@@ -344,31 +351,31 @@ class HeliumEquations:
         full, slope = self._fading(around)
         if full == 0.0:
             return _stacked([0.0] * 7, [0.0] * 7)
-        first = self.first.flow(around, x.single, x.neutral, self._seen(around))
+        first = self.first.flow(around, x.single, x.neutral, self.seen(around))
         lowest = self._first_rates(around, x, first)
         highest = self._upper_rates(around, x, float(state[1]), first)
         found = _stacked(lowest, highest)
         if full == 1.0:
             return found
         fading = Rates(*(full * part for part in found))
-        return fading._replace(by_time=fading.by_time - slope / _EBB * found.rate)
+        return fading._replace(by_time=fading.by_time - slope / EBB * found.rate)
 
     def _upper_rates(
         self, around: Around, x: HeliumFractions, b: float, first: Flow
     ) -> list[float]:
         """Rate of b and its derivatives: by the levels of He II, or by Saha equilibrium."""
-        part, slope = _ramp((b - _GONE) / (_FADING - _GONE))
+        part, slope = ramp((b - GONE) / (FADING - GONE))
         if self.second is None or part == 0.0:
-            return self._saha_rates(around, b)
+            return self.saha_pull(around, b)
         levels = _second_rates(around, x, first, self.second.flow(around, x.double, x.single))
         if part == 1.0:
             return levels
-        pulled = self._saha_rates(around, b)
+        pulled = self.saha_pull(around, b)
         mixed = [part * n + (1.0 - part) * p for n, p in zip(levels, pulled, strict=True)]
-        mixed[2] += slope / (_FADING - _GONE) * (levels[0] - pulled[0])
+        mixed[2] += slope / (FADING - GONE) * (levels[0] - pulled[0])
         return mixed
 
-    def _seen(self, around: Around) -> Seen:
+    def seen(self, around: Around) -> Seen:
         """What the lines of He I see of hydrogen and of each other."""
         hydrogen_cm3 = around.neutral_hydrogen_cm3
         if self.past is None:
@@ -394,11 +401,19 @@ class HeliumEquations:
         log_share = -np.abs(state)
         return np.exp(np.clip(-0.5 * (log_share - _RARE), 0.0, _SLACK))
 
+    def forgetful(self) -> HeliumEquations:
+        """The same with nothing remembered yet of lines."""
+        return self.knowing(0)
+
+    def knowing(self, count: int) -> HeliumEquations:
+        """The same with the first `count` remembered steps alone."""
+        return self if self.past is None else replace(self, past=self.past.until(count))
+
     def first_local(self, around: Around, state: FloatArray) -> Local:
         """Kept levels of He I at (a, b)."""
         x = self.fractions(state)
         conditions = self.first.conditions(around, x.single, x.neutral)
-        return self.first.solve(conditions, self._seen(around))
+        return self.first.solve(conditions, self.seen(around))
 
     def line_figures(self, around: Around, state: FloatArray) -> dict[str, FloatArray]:
         """Validity figures of the lines of He I at (a, b), shape (n_lines,) each.
@@ -444,13 +459,14 @@ class HeliumEquations:
         )
         return [scale * one for one in terms]
 
-    def _saha_rates(self, around: Around, b: float) -> list[float]:
+    def saha_pull(self, around: Around, b: float) -> list[float]:
+        """Rate of b that pulls it to Saha equilibrium, and its derivatives as in Rates."""
         matter_k = around.matter_temperature_k
         slope = -1.5 - self.ionization_ev[1] / (const.BOLTZMANN_EV_K * matter_k)
         pulled = self.saha_log_ratio(1, around) - b
         # Value, by a, by b, by ln n_e, by v, by ln a (T falls, n_e falls as a^-3).
         terms = (pulled, 0.0, -1.0, -1.0, -slope, slope + 3.0, 0.0)
-        return [_PULL * one for one in terms]
+        return [PULL * one for one in terms]
 
     def saha_log_ratio(self, stage: int, around: Around) -> float:
         """Ln of an ion over the stage below it (0: He II/He I) in Saha equilibrium at T_m."""
@@ -489,7 +505,7 @@ def _stacked(first: list[float], second: list[float]) -> Rates:
     return Rates(rows[:, 0], rows[:, 1:3], rows[:, 3], rows[:, 4], rows[:, 5], rows[:, 6])
 
 
-def _ramp(x: float) -> tuple[float, float]:
+def ramp(x: float) -> tuple[float, float]:
     """Smooth step from 0 at x = 0 to 1 at x = 1, and its slope."""
     x = min(max(x, 0.0), 1.0)
     return x * x * (3.0 - 2.0 * x), 6.0 * x * (1.0 - x)

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -14,7 +14,13 @@ from ..atomic.helium_two_photon import helium_two_photon_factor
 from ..atomic.physics import Scales, scales
 from ..atomic.two_photon import stimulated_two_photon_factor, two_photon_rate
 from ..escape.helium_continuum import HeliumContinuum
-from ..escape.helium_lines import HeliumGroundLines, HigherLines, helium_ground_lines, kept_terms
+from ..escape.helium_lines import (
+    HeliumGroundLines,
+    HigherLines,
+    helium_ground_lines,
+    kept_terms,
+    with_strengths,
+)
 from ..escape.helium_past import HeliumPast
 from ..escape.helium_treatment import HeliumSobolev, HeliumSobolevFeedback, HeliumTreatment
 from ..escape.treatment import ResonanceLines, Sobolev
@@ -84,9 +90,15 @@ def helium_treatment(setup: Setup) -> HeliumTreatment:
 def helium_lines_of(setup: Setup, ladders: HeliumLadders) -> HeliumGroundLines:
     """Lines of the kept terms to 1 1S, and which of them lights which."""
     choice, rate = setup.lines.helium_continuum, setup.helium.intercombination_rate_per_s
+    rates = setup.rates
     fed = setup.lines.helium == "sobolev_feedback" or (choice is not None and choice.feedback)
     assert rate is not None
-    return helium_ground_lines(ladders, fed, _higher(setup), rate, setup.physics)
+    lines = helium_ground_lines(ladders, fed, _higher(setup), rate, setup.physics)
+    factor = rates.ground_line_factors(lines.names, "bound_bound")
+    if factor is not None:
+        lines = with_strengths(lines, factor)
+    sigma = rates.absorption_factor * lines.hydrogen_cross_section_cm2
+    return replace(lines, hydrogen_cross_section_cm2=sigma)
 
 
 def _higher(setup: Setup) -> HigherLines:
@@ -113,23 +125,30 @@ def build_helium(setup: Setup, hottest_k: float, tell: Tell, pieces: Pieces | No
     top_k = max(_HOTTEST_K, 2.0 ** (math.ceil(4.0 * math.log2(hottest_k)) / 4.0))
     tolerance = table_tolerance(setup)
     tell("helium", 0.0)
-    ladders = helium_ladders(setup.helium.n_max, kept_terms(setup.helium.n_max, _higher(setup)))
-    reduced = _table_of_first(ladders, top_k, tolerance, pieces)
+    changed = setup.rates.network_of("He I")
+    terms = kept_terms(setup.helium.n_max, _higher(setup))
+    ladders = helium_ladders(setup.helium.n_max, terms, overrides=changed)
+    keys = tuple(part for one in changed for part in one.key)
+    reduced = _table_of_first(ladders, top_k, tolerance, pieces, keys)
     decay = [(int(n), int(l), int(s)) for n, l, s in _terms(ladders.kept)].index((2, 0, 0))
     assert setup.helium.two_photon_rate_per_s is not None
     lines = helium_lines_of(setup, ladders)
     past = HeliumPast.of(lines) if lines.fed else None
+    rate = setup.rates.two_photon_rate_per_s(setup.helium.two_photon_rate_per_s, "He I")
     first = IonNetwork(
         with_scales(reduced, factor),
         lines,
         treatment,
         decay,
-        setup.helium.two_photon_rate_per_s * factor.two_photon_rate,
-        _stimulation(setup, helium_two_photon_factor, top_k, factor),
+        rate * factor.two_photon_rate,
+        stimulation=_stimulation(setup, helium_two_photon_factor, top_k, factor),
+        escape_factor=setup.rates.ground_line_factors(lines.names, "escape"),
     )
     # Saha equilibrium of He III too asks the ion for its energy.
-    energies_of = setup.hydrogen.energies
-    ion = hydrogen_ladder(setup.helium.n_max, energies_of, ((2, 0), (2, 1)), charge=2)
+    energies_of, changed = setup.hydrogen.energies, setup.rates.network_of("He II")
+    ion = hydrogen_ladder(
+        setup.helium.n_max, energies_of, ((2, 0), (2, 1)), None, changed, charge=2
+    )
     first_ev, second_ev = (
         float(one.ionization_energy_ev[0]) * factor.energy for one in (ladders.levels, ion.levels)
     )
@@ -140,16 +159,22 @@ def build_helium(setup: Setup, hottest_k: float, tell: Tell, pieces: Pieces | No
         return HeliumAtoms(
             ladders, None, HeliumEquations(first, None, energies, past, factor), nodes, error
         )
-    table = _table_of_second(ion, energies_of, top_k, tolerance, pieces)
+    keys = tuple(part for one in changed for part in one.key)
+    table = _table_of_second(ion, top_k, tolerance, pieces, (energies_of, *keys))
     tell("helium", 1.0)
     gap_ev = float(ion.kept.energy_ev[0])
+    rate = setup.rates.two_photon_rate_per_s(two_photon_rate(2), "He II")
+    escape = setup.rates.ion_escape_factor()
     second = IonNetwork(
         with_scales(table, factor),
         _line_of_second(ion, factor),
         Sobolev(),
         0,
-        two_photon_rate(2) * factor.two_photon_rate,
-        _stimulation(setup, lambda t: stimulated_two_photon_factor(t, gap_ev), top_k, factor),
+        rate * factor.two_photon_rate,
+        stimulation=_stimulation(
+            setup, lambda t: stimulated_two_photon_factor(t, gap_ev), top_k, factor
+        ),
+        escape_factor=None if escape == 1.0 else np.array([escape]),
     )
     return HeliumAtoms(
         ladders,
@@ -190,18 +215,26 @@ def _line_of_second(ion: Ladder, scale: Scales) -> ResonanceLines:
 
 
 def _table_of_first(
-    ladders: HeliumLadders, top_k: float, tolerance: float, pieces: Pieces | None
+    ladders: HeliumLadders,
+    top_k: float,
+    tolerance: float,
+    pieces: Pieces | None,
+    changed: tuple[object, ...],
 ) -> HeliumReduction:
     tables = [one.sha256 for one in list_tables() if one.name.startswith("helium/")]
     terms = [number for term in _terms(ladders.kept) for number in term]
-    key = ("helium", code_digest(_CODE), *tables, ladders.levels.n_max, *terms)
+    key = ("helium", code_digest(_CODE), *tables, ladders.levels.n_max, *terms, *changed)
     return tabulate_helium(ladders, COLDEST_K, top_k, tolerance, recall_from(pieces, *key))
 
 
 def _table_of_second(
-    ion: Ladder, energies: str, top_k: float, tolerance: float, pieces: Pieces | None
+    ion: Ladder,
+    top_k: float,
+    tolerance: float,
+    pieces: Pieces | None,
+    chosen: tuple[object, ...],
 ) -> TabulatedReduction:
-    key = ("helium ion", code_digest(_CODE), ion.n_max, energies)
+    key = ("helium ion", code_digest(_CODE), ion.n_max, *chosen)
     return tabulate(ion, COLDEST_K, top_k, tolerance, recall=recall_from(pieces, *key))
 
 

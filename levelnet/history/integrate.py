@@ -105,7 +105,8 @@ def integrate_history(
     redshift = output_redshifts(setup)
     atoms = None
     if setup.helium_recombines:
-        hottest_k = float(setup.cosmology.radiation_temperature_k(float(redshift[0])))
+        highest = max(float(redshift[0]), start_above)
+        hottest_k = float(setup.cosmology.radiation_temperature_k(highest))
         atoms = build_helium(setup, hottest_k, tell, pieces)
     helium = None if atoms is None else atoms.equations
     scout = _scout(setup, chosen, helium)

@@ -11,10 +11,11 @@ from typing import Annotated, Any
 
 from pydantic import Field
 
-from ..atomic.overrides import Rates
+from ..atomic.overrides import Override, Rates
 from ..atomic.physics import Physics, scales
 from ..atomic.selection import AtomSize
 from ..atomic.species import Helium, Hydrogen
+from ..atomic.term_patterns import HeliumSize
 from ..background.cosmology import Cosmology
 from ..errors import InputError
 from ..escape.frequency_step import (
@@ -24,7 +25,7 @@ from ..escape.frequency_step import (
     fitted_step,
     highest_line,
 )
-from ..escape.lines import Lines
+from ..escape.lines import HIGHEST_FED, Lines
 from ..records import build, checked_record, from_mapping
 from ..texts import read_text
 
@@ -214,6 +215,9 @@ class Setup:
         """Refuse factors on rates that this setup switches off."""
         for one in self.rates.table:
             process = one.selector.process
+            if one.selector.species != "H I":
+                self._check_helium_override_acts(one)
+                continue
             if process == "escape" and self.lines.hydrogen == "closed":
                 raise ValueError(
                     f'{one.where}: {one.text} changes nothing: lines.hydrogen = "closed"'
@@ -229,12 +233,31 @@ class Setup:
                     f"{one.where}: {one.text} changes nothing: hydrogen.two_photon_rate_per_s = 0"
                 )
 
+    def _check_helium_override_acts(self, one: Override) -> None:
+        off = self.helium.two_photon_rate_per_s == 0.0 and one.value_per_s is None
+        if one.selector.process == "two_photon" and one.selector.species == "He I" and off:
+            raise ValueError(
+                f"{one.where}: {one.text} changes nothing: helium.two_photon_rate_per_s = 0"
+            )
+
     @property
     def atom_size(self) -> AtomSize:
         """What selectors of rates must find their match in."""
         count, n_max = self.lines.lyman_lines, self.hydrogen.n_max
         lines = n_max - 1 if isinstance(count, str) else count
-        return AtomSize(n_max, self.hydrogen.highest_resolved, lines)
+        return AtomSize(n_max, self.hydrogen.highest_resolved, lines, self._helium_size())
+
+    def _helium_size(self) -> HeliumSize:
+        """What helium has; nothing where there is no helium."""
+        n_max = self.helium.n_max if self.helium_recombines else 0
+        higher = self.lines.helium_higher_lines or "closed"
+        return HeliumSize(
+            n_max,
+            {"closed": 2, "free": n_max, "feedback": min(n_max, HIGHEST_FED)}[higher],
+            bool(self.helium.intercombination_rate_per_s),
+            self.lines.helium == "continuum",
+            self.helium.helium_ion == "network",
+        )
 
     @property
     def helium_recombines(self) -> bool:

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field, replace
+from dataclasses import dataclass, field, fields, replace
 
 import numpy as np
 
@@ -93,6 +93,16 @@ def with_decay(
     source[kept] += rate_per_s * boltzmann
     slope_temperature[kept, kept] += rate_per_s * slope
     return replace(coupling, loss=loss, source=source, slope_temperature=slope_temperature)
+
+
+def plus(coupling: GroundCoupling, other: GroundCoupling, share: float) -> GroundCoupling:
+    """A coupling and `share` times another one; `validity` stays that of the first."""
+    sums = {}
+    for part in fields(coupling):
+        one, two = getattr(coupling, part.name), getattr(other, part.name)
+        if part.name != "validity" and two is not None:
+            sums[part.name] = share * two if one is None else one + share * two
+    return replace(coupling, **sums)
 
 
 def with_line_factors(

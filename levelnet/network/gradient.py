@@ -107,6 +107,20 @@ def channel_gradient(
     return _gradient(rates, photo, solution, fate, gain, own - fate)
 
 
+def departure_gradient(rates: ReducedRates, solution: KeptSolution, kept: int) -> FlowGradient:
+    """Gradient of the departure of one kept level; times s, for it is no flow."""
+    ends = np.zeros((len(solution.departure), 1))
+    ends[kept, 0] = 1.0
+    (fate,) = _fates(solution, ends)
+    photo = np.exp(rates.log_photoionization)
+    return _gradient(rates, photo, solution, fate, np.subtract.outer(fate, fate), -fate)
+
+
+def times(gradient: FlowGradient, factor: float) -> FlowGradient:
+    """Gradient of a multiple."""
+    return FlowGradient(*(factor * part for part in gradient))
+
+
 def line_gradient(
     rates: ReducedRates, solution: KeptSolution, upper: int, lower: int, down: float, up: float
 ) -> FlowGradient:

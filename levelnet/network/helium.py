@@ -29,6 +29,8 @@ from ..atomic.helium_bound_free import (
 )
 from ..atomic.helium_levels import HeliumLevels, helium_levels
 from ..atomic.helium_lines import HeliumLines, helium_lines
+from ..atomic.helium_transitions import with_helium_overrides
+from ..atomic.overrides import Override
 from ..errors import RangeError
 from ..numerics.block_cholesky import BlockCholesky, factor_symmetric
 from ..numerics.chebyshev import ChebyshevSeries, chebyshev_nodes
@@ -79,7 +81,12 @@ def _atom(n_max: int, hydrogenic: bool) -> tuple[HeliumLevels, HeliumLines, Heli
     return levels, helium_lines(levels), helium_bound_free(levels)
 
 
-def helium_ladders(n_max: int, kept: KeptTerms, hydrogenic: bool = False) -> HeliumLadders:
+def helium_ladders(
+    n_max: int,
+    kept: KeptTerms,
+    hydrogenic: bool = False,
+    overrides: tuple[Override, ...] = (),
+) -> HeliumLadders:
     """Build He I.
 
     Parameters
@@ -90,8 +97,11 @@ def helium_ladders(n_max: int, kept: KeptTerms, hydrogenic: bool = False) -> Hel
         Levels to keep.
     hydrogenic : bool
         The limit in which all must equal hydrogen.
+    overrides : tuple of Override, optional
+        Factors on lines and cross sections of He I.
     """
     levels, lines, continuum = _atom(n_max, hydrogenic)
+    lines, continuum = with_helium_overrides(lines, continuum, overrides)
     position = np.array(
         sorted((levels.index(*one) for one in kept), key=lambda i: _order(levels, i))
     )
@@ -116,7 +126,7 @@ def _order(levels: HeliumLevels, index: int) -> float:
     return float(levels.energy_ev[index])
 
 
-def _line_rates(
+def line_rates(
     ladders: HeliumLadders, own: IntArray, other: IntArray, strength: FloatArray, kt_ev: float
 ) -> tuple[FloatArray, FloatArray]:
     """Rates from `own` to `other` and back, s^-1; zero where there is no line."""
@@ -144,7 +154,7 @@ def _kept_lines(ladders: HeliumLadders, k: int, kt_ev: float) -> KeptLines:
             strength = block[n - l - 1, levels.n[partner] - other_l - 1]
         else:
             strength = block[levels.n[partner] - other_l - 1, n - l - 1]
-        out[partner], back[partner] = _line_rates(
+        out[partner], back[partner] = line_rates(
             ladders, np.full_like(partner, own), partner, strength, kt_ev
         )
     return KeptLines(out, back)
@@ -263,6 +273,35 @@ def reduce_helium(ladders: HeliumLadders, radiation_temperature_k: float) -> Flo
         capture into each, as :func:`levelnet.network.rates.assemble_rates` takes them.
     """
     here = factor_helium(ladders, radiation_temperature_k)
+    found = reduce_factored(ladders, here, radiation_temperature_k)
+    lower, upper = np.triu_indices(len(ladders.kept), 1)
+    with np.errstate(divide="ignore"):
+        exchange = np.maximum(np.log(found.exchange[upper, lower]), NEVER)
+    return np.concatenate([exchange, np.log(np.maximum(found.spectrum, 1e-300)).ravel()])
+
+
+class ReducedHelium(NamedTuple):
+    """Results of one reduction of He I, and the fates behind them.
+
+    Attributes
+    ----------
+    fates : ndarray, shape (n_kept, n_levels), dimensionless
+        Chance of each level to reach each kept level first; a kept level has its own.
+    exchange : ndarray, shape (n_kept, n_kept), s^-1
+        From row to column, directly and through eliminated levels.
+    spectrum : ndarray, shape (n_kept, n_energies), s^-1
+        Spectral capture into each kept level.
+    """
+
+    fates: FloatArray
+    exchange: FloatArray
+    spectrum: FloatArray
+
+
+def reduce_factored(
+    ladders: HeliumLadders, here: Reduction, radiation_temperature_k: float
+) -> ReducedHelium:
+    """Reduce He I at one T_r, given what :func:`factor_helium` made of it there."""
     rows = here.kept_lines
     fates = np.zeros((len(rows), len(ladders.levels)))
     for side, inside in zip(here.interior, ladders.interior, strict=True):
@@ -270,13 +309,9 @@ def reduce_helium(ladders: HeliumLadders, radiation_temperature_k: float) -> Flo
             fates[:, inside.position] = side.fates(here.to_kept[:, inside.position])
     detour = np.array([row.out for row in rows]) @ fates.T
     direct = np.array([row.out[ladders.kept_position] for row in rows])
-    total = detour + direct
-    lower, upper = np.triu_indices(len(rows), 1)
-    with np.errstate(divide="ignore"):
-        exchange = np.maximum(np.log(total[upper, lower]), NEVER)
     fates[:, ladders.kept_position] = np.eye(len(rows))
     spectrum = fates @ captured_spectrum(ladders.bound_free, radiation_temperature_k)
-    return np.concatenate([exchange, np.log(np.maximum(spectrum, 1e-300)).ravel()])
+    return ReducedHelium(fates, detour + direct, spectrum)
 
 
 def helium_rate_constants(ladders: HeliumLadders) -> RateConstants:

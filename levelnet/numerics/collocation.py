@@ -16,7 +16,7 @@ from __future__ import annotations
 import itertools
 from collections.abc import Callable
 from dataclasses import dataclass
-from typing import Generic, NamedTuple, TypeVar
+from typing import Generic, NamedTuple, Protocol, TypeVar
 
 import numpy as np
 
@@ -109,6 +109,7 @@ def collocate(
     edges: FloatArray,
     start: FloatArray,
     guess: FloatArray,
+    on_edge: Callable[[float, FloatArray], None] = lambda time, state: None,
 ) -> Collocated[Here]:
     """Solve dy/dt = f over given steps.
 
@@ -122,6 +123,9 @@ def collocate(
         State at the first edge.
     guess : ndarray, shape (n_steps, 3, n)
         Stages to start Newton's iteration from.
+    on_edge : callable, optional
+        Told (t, y) at every edge as soon as it is known, the first one too: what later equations
+        may remember.
 
     Returns
     -------
@@ -135,11 +139,13 @@ def collocate(
     """
     stages, linear = np.array(guess), []
     state = np.asarray(start, dtype=np.float64)
+    on_edge(float(edges[0]), state)
     for step, (begin, end) in enumerate(itertools.pairwise(edges.tolist())):
         times = begin + (end - begin) * NODES
         found = _solve_step(linearize, times, end - begin, state, stages[step])
         linear.append(found)
         state = stages[step, 2]
+        on_edge(end, state)
     return Collocated(edges, np.asarray(start), stages, linear)
 
 
@@ -173,7 +179,24 @@ def _system(length: float, linear: list[Linear[Here]]) -> FloatArray:
     return system
 
 
-def adjoint(solution: Collocated[Here], source: FloatArray) -> tuple[FloatArray, FloatArray]:
+class Memory(Protocol):
+    """What equations remember of states at earlier edges, for an adjoint; scalars along axis 0."""
+
+    def told(self, step: int, weight: FloatArray) -> None:
+        """Take note of the weights of the stages of a step, shape (n_scalars, 3, n)."""
+        ...
+
+    def by_edge(self, edge: int) -> FloatArray:
+        """Derivative by the state at an edge of all that remembers it, shape (n_scalars, n).
+
+        Asked when the weights of all later steps have been told.
+        """
+        ...
+
+
+def adjoint(
+    solution: Collocated[Here], source: FloatArray, memory: Memory | None = None
+) -> tuple[FloatArray, FloatArray]:
     """Weights that turn changes of f at the stages into changes of scalars of the solution.
 
     Parameters
@@ -183,6 +206,8 @@ def adjoint(solution: Collocated[Here], source: FloatArray) -> tuple[FloatArray,
     source : ndarray, shape (n_scalars, n_steps, 3, n)
         Derivative of each scalar by each stage, the state at an edge counted with the stage that
         ends there.
+    memory : Memory, optional
+        Where the equations at a stage remember states at the edges before it.
 
     Returns
     -------
@@ -198,10 +223,14 @@ def adjoint(solution: Collocated[Here], source: FloatArray) -> tuple[FloatArray,
         length = float(solution.edges[step + 1] - solution.edges[step])
         right = source[:, step].copy()
         right[:, 2] += carried
+        if memory is not None:
+            right[:, 2] += memory.by_edge(step + 1)
         system = _system(length, solution.linear[step])
         mu = np.linalg.solve(system.T, right.reshape(n_scalars, 3 * n).T).T.reshape(right.shape)
         carried = mu.sum(axis=1)
         weight[:, step] = length * np.einsum("ij,tin->tjn", MATRIX, mu)
+        if memory is not None:
+            memory.told(step, weight[:, step])
     return weight, carried
 
 

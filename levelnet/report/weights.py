@@ -14,18 +14,17 @@ from ..studies.groups import by_level, top_transitions
 from ..studies.targets import parse_target
 from ..studies.weighing import Weighing
 from . import style
+from .bars import MOST_BARS, draw_bars, sign_legend
 from .budget import band_figure
 from .figures import check_place, save_drawn
+from .helium_weights import helium_figure
 from .importance import importance_figure
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
     from matplotlib.figure import Figure
 
-_BARS = 10  # more would not be legible in half a page's height
 _LETTERS = 32  # of a name beside a bar
-_ROUNDING_POWER = -7  # what is smaller than this part of the largest may be rounding
-_ROUNDING = 10.0**_ROUNDING_POWER
 _SYMBOLS = {
     "hubble_km_s_mpc": "$H_0$",
     "baryon_density_h2": r"$\omega_b$",
@@ -69,7 +68,8 @@ def save_weighing_figures(
     Parameters
     ----------
     weighing : Weighing
-        Any; each target gives a map and a ranking, a budget with x_e at two redshifts a band.
+        Any; each target gives a map and a ranking, with helium a ranking of its rates too, and a
+        budget with x_e at two redshifts a band.
     folder : str or Path
         Where to.
     force : bool
@@ -87,19 +87,26 @@ def save_weighing_figures(
     InputError
         If a file exists and `force` is not set, or `folder` is a file.
     """
-    check_place(folder, figure_paths(weighing.targets, _has_band(weighing), folder), force)
+    helium = weighing.helium is not None
+    places = figure_paths(weighing.targets, _has_band(weighing), folder, helium)
+    check_place(folder, places, force)
     figures: dict[str, Figure] = {}
     for target, name in zip(weighing.targets, file_names(weighing.targets), strict=True):
         figures[f"map-{name}"] = importance_figure(weighing, target, target_label(target))
         figures[f"ranking-{name}"] = ranking_figure(weighing, target)
+        if weighing.helium is not None:
+            figures[f"helium-{name}"] = helium_figure(weighing, target, target_label(target))
     if weighing.budget is not None and _has_band(weighing):
         figures["error-band"] = band_figure(weighing.budget)
     return save_drawn(figures, folder, progress)
 
 
-def figure_paths(targets: Sequence[str], band: bool, folder: str | Path) -> tuple[Path, ...]:
+def figure_paths(
+    targets: Sequence[str], band: bool, folder: str | Path, helium: bool = False
+) -> tuple[Path, ...]:
     """Files that :func:`save_weighing_figures` writes into `folder` for these targets."""
-    names = [f"{kind}-{k}" for k in file_names(targets) for kind in ("map", "ranking")]
+    kinds = ("map", "ranking", "helium") if helium else ("map", "ranking")
+    names = [f"{kind}-{k}" for k in file_names(targets) for kind in kinds]
     names += ["error-band"] if band else []
     return tuple(Path(folder) / f"{name}.{end}" for name in names for end in style.FORMATS)
 
@@ -154,7 +161,7 @@ def ranking_figure(weighing: Weighing, target: str) -> Figure:
         figure = style.new_figure(style.TWO_COLUMNS_IN, 4.9)
         panels = figure.subplots(2, 2).ravel()
         _process_bars(panels[0], weighing, at)
-        transitions = top_transitions(weighing, target, _BARS)
+        transitions = top_transitions(weighing, target, MOST_BARS)
         draw_bars(
             panels[1],
             [one.name for one in transitions],
@@ -162,12 +169,12 @@ def ranking_figure(weighing: Weighing, target: str) -> Figure:
             "all are 0" if len(weighing.upper) else "no transitions",
         )
         shares = by_level(weighing, target)
-        order = np.argsort(-np.abs(shares.bound_free), kind="stable")[:_BARS]
+        order = np.argsort(-np.abs(shares.bound_free), kind="stable")[:MOST_BARS]
         first = [k for k in order if shares.bound_free[k] != 0.0]
         draw_bars(panels[2], [shares.names[k] for k in first], list(shares.bound_free[first]))
         titles = ["processes, parameters", "dipole transitions", "cross sections of levels"]
         if budget is not None and target in budget.targets:
-            ranked = [one for one in budget.ranked(target)[:_BARS] if one.contribution != 0.0]
+            ranked = [one for one in budget.ranked(target)[:MOST_BARS] if one.contribution != 0.0]
             names = [_cut(one.group) for one in ranked]
             draw_bars(panels[3], names, [one.contribution for one in ranked])
             panels[3].tick_params(axis="y", labelsize=6.5)
@@ -181,7 +188,7 @@ def ranking_figure(weighing: Weighing, target: str) -> Figure:
             panels[3].set_visible(False)
         else:
             panels[3].set_xlabel(rf"|contribution to $\Delta J/J$|,  $J$ = {label}")
-        _sign_legend(figure)
+        sign_legend(figure)
     return figure
 
 
@@ -194,88 +201,6 @@ def _process_bars(axes: Axes, weighing: Weighing, at: int) -> None:
     draw_bars(axes, ranked, [values[name] for name in ranked])
 
 
-def draw_bars(
-    axes: Axes, names: Sequence[str], values: Sequence[float], nothing: str = "all are 0"
-) -> None:
-    """Draw horizontal bars of sizes, the first on top.
-
-    What is 0, NaN or at the level of rounding has words in place of a bar; without any bar the
-    panel says `nothing`.
-    """
-    from matplotlib.ticker import NullFormatter
-
-    sizes = np.nan_to_num(np.abs(np.array(values, dtype=float)))
-    top = float(sizes.max(initial=0.0))
-    if top == 0.0:
-        axes.text(0.5, 0.5, nothing, transform=axes.transAxes, ha="center", va="center")
-        axes.set_xticks([])
-        axes.set_yticks([])
-        return
-    seen = sizes >= _ROUNDING * top
-    # Two decades at least in all, or small differences look large.
-    low = float(np.clip(0.3 * sizes[seen].min(), _ROUNDING * top, 0.025 * top))
-    for place, value in enumerate(values):
-        if seen[place]:
-            _draw_bar(axes, place, value, low)
-        text = _signed(value) if seen[place] else _in_words(value)
-        axes.annotate(
-            text,
-            (max(float(sizes[place]), low), place),
-            xytext=(2, 0),
-            textcoords="offset points",
-            va="center",
-            fontsize=6.0,
-        )
-    axes.set_xscale("log")
-    axes.xaxis.set_minor_formatter(NullFormatter())
-    # Room for the numbers behind the bars.
-    axes.set_xlim(low, top * (top / low) ** 0.45)
-    axes.set_yticks(range(len(names)), names)
-    axes.set_ylim(max(len(names), _BARS // 2) - 0.4, -0.6)
-    axes.tick_params(axis="y", length=0)
-
-
-def _draw_bar(axes: Axes, place: int, value: float, low: float) -> None:
-    negative = value < 0.0
-    axes.barh(
-        place,
-        abs(value) - low,
-        left=low,
-        height=0.7,
-        color="white" if negative else style.BLUE,
-        edgecolor=style.ORANGE if negative else style.BLUE,
-        hatch="//////" if negative else None,
-        linewidth=0.8,
-    )
-
-
-def _in_words(value: float) -> str:
-    """Say why there is no bar."""
-    if value == 0.0:
-        return "0"
-    return (
-        rf"below $10^{{{_ROUNDING_POWER}}}$ of the largest" if np.isfinite(value) else "undefined"
-    )
-
-
 def _cut(text: str) -> str:
     """Bring a long name into one line."""
     return text if len(text) <= _LETTERS else f"{text[: _LETTERS - 3].rstrip()}..."
-
-
-def _signed(value: float) -> str:
-    """Two digits and the sign, in the notation of papers."""
-    if 1e-3 <= abs(value) < 1e3:
-        return f"{value:+.2g}".replace("-", "\N{MINUS SIGN}")
-    digits, _, power = f"{value:+.1e}".partition("e")
-    return rf"${digits}\times10^{{{int(power)}}}$"
-
-
-def _sign_legend(figure: Figure) -> None:
-    from matplotlib.patches import Patch
-
-    signs = [
-        Patch(facecolor=style.BLUE, edgecolor=style.BLUE, label="positive"),
-        Patch(facecolor="white", edgecolor=style.ORANGE, hatch="//////", label="negative"),
-    ]
-    figure.legend(handles=signs, loc="outside upper center", ncols=2)

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from typing import TYPE_CHECKING, Any
 
+from ..atomic.helium_levels import HeliumLevels
 from ..atomic.levels import LevelSet
 from ..errors import FileFormatError
 from ..history.result import Channels, RadiationField
@@ -23,21 +24,39 @@ if TYPE_CHECKING:
 def weighing_of(content: Content) -> Weighing:
     """Make the weighing that :func:`levelnet.store.write.content_of` took apart."""
     from ..studies.budget_record import ErrorBudget
+    from ..studies.helium_weighing import HeliumWeights, IonWeights
     from ..studies.weighing import Weighing
 
     parts = all_fields(content, WEIGHING_LAYOUT)
     levels = LevelSet(**parts.pop("levels"))
-    for name in ("upper", "lower", "line_upper"):
-        if len(parts[name]) and not 0 <= parts[name].min() <= parts[name].max() < len(levels):
-            raise FileFormatError(f"{name}: names levels that are not in the file")
+    _check_positions(parts, len(levels))
     budget = parts.pop("budget", None)
+    helium, ion = parts.pop("helium", None), parts.pop("helium_ion", None)
+    if helium is not None:
+        terms = helium.pop("levels")
+        terms = HeliumLevels(n_max=int(terms["n"].max()), nuclear_charge=2, **terms)
+        _check_positions(helium, len(terms))
+        helium = HeliumWeights(levels=terms, **helium)
+    if ion is not None:
+        ion["levels"] = LevelSet(**ion["levels"])
+        _check_positions(ion, len(ion["levels"]))
+        ion = IonWeights(**ion)
     return Weighing(
         setup=parse_setup(str(content.attributes["setup"]), "stored setup"),
         outcome=outcome_of(content),
         levels=levels,
         budget=None if budget is None else ErrorBudget(**budget),
+        helium=helium,
+        helium_ion=ion,
         **parts,
     )
+
+
+def _check_positions(parts: dict[str, Any], n_levels: int) -> None:
+    for name in ("upper", "lower", "line_upper"):
+        found = parts.get(name, ())
+        if len(found) and not 0 <= found.min() <= found.max() < n_levels:
+            raise FileFormatError(f"{name}: names levels that are not in the file")
 
 
 def level_study_of(content: Content) -> LevelStudy:

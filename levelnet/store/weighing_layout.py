@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 from . import layout
 from .schema import Group, Kind, Layout, Variable, describe
 
@@ -88,13 +90,80 @@ BUDGET = Group(
     ),
 )
 
+
+def _helium(part: str, what: str, *more: Variable) -> tuple[Variable, ...]:
+    """Levels, transitions and their derivatives of one ion of helium, in field `part`."""
+
+    def level(name: str, units: str, long_name: str, kind: Kind = "float64") -> Variable:
+        own = _level(name, units, long_name, kind)
+        return replace(own, field=f"{part}.{own.field}")
+
+    def end(name: str, over: str, long_name: str) -> Variable:
+        return replace(_end(name, over, long_name), field=f"{part}.{name}")
+
+    spin = (level("spin", "1", "total spin, 0 or 1", "int64"),) if part == "helium" else ()
+    return (
+        _text("target", "target", "scalar of the history", "targets"),
+        _position("level", "position of the level, from 0"),
+        level("n", "1", "principal quantum number", "int64"),
+        level("l", "1", "orbital quantum number", "int64"),
+        *spin,
+        level("statistical_weight", "1", "statistical weight, nuclear spin not counted"),
+        level("energy", "eV", "energy above the ground state"),
+        level("ionization_energy", "eV", "energy that ionizes the level"),
+        _position("transition", "position of the dipole transition, from 0"),
+        end("upper", "transition", "upper level of the dipole transition"),
+        end("lower", "transition", "lower level of the dipole transition"),
+        *more,
+        _weight("bound_bound", "strength of the transition", "transition", f"{part}.bound_bound"),
+        _weight("bound_free", "cross section of the level", "level", f"{part}.bound_free"),
+        _weight("two_photon", f"two-photon rate of {what}", "", f"{part}.two_photon"),
+    )
+
+
+HELIUM = Group(
+    "helium",
+    "derivatives of ln of each target by ln of every rate of He I",
+    _helium(
+        "helium",
+        "2 1S",
+        _text("line", "line", "line to 1 1S whose photons escape", "helium.lines"),
+        replace(
+            _end("line_upper", "line", "upper term of the line to 1 1S"), field="helium.line_upper"
+        ),
+        _weight("line_strength", "Einstein A of the line to 1 1S", "line", "helium.strength"),
+        _weight(
+            "escape",
+            "rate at which photons of the line escape, depth held",
+            "line",
+            "helium.escape",
+        ),
+        _weight(
+            "absorption",
+            "cross section of H I 1s inside the lines of He I and between them",
+            "",
+            "helium.absorption",
+        ),
+    ),
+)
+
+HELIUM_ION = Group(
+    "helium_ion",
+    "derivatives of ln of each target by ln of every rate of He II",
+    _helium(
+        "helium_ion",
+        "2s",
+        _weight("escape", "rate at which photons of 2p-1s escape", "", "helium_ion.escape"),
+    ),
+)
+
 WEIGHING_LAYOUT = Layout(
     "levelnet weighing",
     1,
     "a weighing",
     layout.ROOT_ATTRIBUTES,
     (WEIGHING, layout.NOTES),
-    (BUDGET,),
+    (HELIUM, HELIUM_ION, BUDGET),
 )
 
 

@@ -16,7 +16,8 @@ import numpy as np
 
 import atomic_tables
 
-from ..arrays import FloatArray
+from ..arrays import BoolArray, FloatArray
+from ..atomic.helium_selection import ground_line_mask, term_mask, term_pair_mask
 from ..atomic.selection import Selector, check_exists, level_mask, line_mask, pair_mask
 from ..atomic.selector_rows import (
     SELECTOR_COLUMNS,
@@ -29,10 +30,11 @@ from ..errors import InputError
 from ..history.setup import Setup
 from ..tables import read_table
 from .budget_record import ErrorBudget
+from .helium_weighing import HeliumWeights, IonWeights
 from .weighing import Weighing
 
 COLUMNS = (*SELECTOR_COLUMNS, "sigma", "group", "source")
-DEFAULT_TABLE = "hydrogen/rate_uncertainties"
+DEFAULT_TABLES = ("hydrogen/rate_uncertainties", "helium/rate_uncertainties")
 LARGEST_SIGMA = 1.0
 
 
@@ -77,8 +79,8 @@ def load_uncertainties(path: str | Path | None = None) -> tuple[Uncertainty, ...
     ----------
     path : str or Path, optional
         A CSV file with the columns ``process,upper,lower,sigma,group,source``; None: the project's
-        table of published uncertainties and of estimates, ``hydrogen/rate_uncertainties`` of
-        `atomic_tables`.
+        tables of published uncertainties and of estimates, ``hydrogen/rate_uncertainties`` and
+        ``helium/rate_uncertainties`` of `atomic_tables`.
 
     Returns
     -------
@@ -92,9 +94,15 @@ def load_uncertainties(path: str | Path | None = None) -> tuple[Uncertainty, ...
         that is not known, a sigma that is no number or outside 0 to 1, or no source. One line with
         the row, counted from 1 below the header.
     """
-    if path is None:
-        read_table(DEFAULT_TABLE)  # holds it against its checksum
-        path = atomic_tables.path(f"{DEFAULT_TABLE}.csv")
+    if path is not None:
+        return _read(path)
+    for name in DEFAULT_TABLES:
+        read_table(name)  # holds it against its checksum
+    files = [atomic_tables.path(f"{name}.csv") for name in DEFAULT_TABLES]
+    return tuple(one for file in files for one in _read(file))
+
+
+def _read(path: str | Path) -> tuple[Uncertainty, ...]:
     rows = parse_rows(read_rows(path, COLUMNS), COLUMNS, str(path))
     return tuple(_uncertainty(row) for row in rows)
 
@@ -121,8 +129,9 @@ def uncertainties_in(setup: Setup, path: str | Path | None = None) -> tuple[Unce
         What will be weighed.
     path : str or Path, optional
         A file of one's own: InputError where a row selects nothing in the atom. None: the rows of
-        the default table that apply; those of the escape say what Sobolev's treatment leaves out,
-        and are left out themselves with any other.
+        the default tables that apply; those of an escape say what one treatment leaves out,
+        Sobolev's of hydrogen and partial redistribution with the continuum of He I, and are left
+        out themselves with any other.
     """
     rows, atom = load_uncertainties(path), setup.atom_size
     if path is not None:
@@ -130,9 +139,16 @@ def uncertainties_in(setup: Setup, path: str | Path | None = None) -> tuple[Unce
             check_exists(one.selector, atom, one.where)
         return rows
     found = tuple(one for one in rows if one.selector.exists_in(atom))
-    if setup.lines.hydrogen != "sobolev":
-        found = tuple(one for one in found if one.selector.process != "escape")
-    return found
+    partial = setup.lines.helium_continuum
+    meant = {
+        "H I": setup.lines.hydrogen == "sobolev",
+        "He I": partial is not None and partial.redistribution == "partial",
+    }
+    return tuple(
+        one
+        for one in found
+        if one.selector.process != "escape" or meant.get(one.selector.species, True)
+    )
 
 
 def error_budget(weighing: Weighing, uncertainties: Sequence[Uncertainty]) -> ErrorBudget:
@@ -186,20 +202,65 @@ def error_budget(weighing: Weighing, uncertainties: Sequence[Uncertainty]) -> Er
 
 def derivatives(weighing: Weighing, one: Uncertainty) -> FloatArray:
     """Give d ln J / d ln of a common factor on the selected rates, shape (n_targets,)."""
-    process = one.selector.process
+    found = _derivatives(weighing, one.selector)
+    if found is None:
+        raise InputError(
+            f'{one.where}: selector "{one.selector.text}" matches nothing among the levels and '
+            f"lines weighed: {_weighed(weighing, one.selector.species)}"
+        )
+    return found
+
+
+def _derivatives(weighing: Weighing, selector: Selector) -> FloatArray | None:
+    """The same; None where nothing is selected."""
+    process = selector.process
+    if selector.species == "He I" or process == "absorption":
+        return None if weighing.helium is None else _of_helium(weighing.helium, selector)
+    part: Weighing | IonWeights | None = weighing
+    if selector.species == "He II":
+        part = weighing.helium_ion
+    if part is None:
+        return None
     if process in {"two_photon", "compton"}:
-        single: FloatArray = getattr(weighing, process)
+        single: FloatArray = getattr(part, process)
         return single
     if process == "bound_bound":
-        chosen = pair_mask(one.selector, weighing.levels, weighing.upper, weighing.lower)
+        chosen = pair_mask(selector, part.levels, part.upper, part.lower)
     elif process == "bound_free":
-        chosen = level_mask(one.selector, weighing.levels)
+        chosen = level_mask(selector, part.levels)
+    elif isinstance(part, IonWeights):
+        return part.escape if line_mask(selector, np.array([2])).any() else None
     else:
-        chosen = line_mask(one.selector, weighing.levels.n[weighing.line_upper])
-    if not chosen.any():
-        raise InputError(
-            f'{one.where}: selector "{one.selector.text}" matches nothing among the '
-            f"{len(weighing.levels)} levels and the lines {', '.join(weighing.lines)} weighed"
-        )
-    total: FloatArray = getattr(weighing, process)[:, chosen].sum(axis=1)
-    return total
+        chosen = line_mask(selector, part.levels.n[part.line_upper])
+    return _summed(getattr(part, process), chosen)
+
+
+def _of_helium(helium: HeliumWeights, selector: Selector) -> FloatArray | None:
+    process = selector.process
+    if process in {"two_photon", "absorption"}:
+        single: FloatArray = getattr(helium, process)
+        return single
+    if process == "bound_free":
+        return _summed(helium.bound_free, term_mask(selector, helium.levels))
+    if process == "escape" or selector.to_ground:
+        by_line = helium.escape if process == "escape" else helium.strength
+        return _summed(by_line, ground_line_mask(selector, helium.lines))
+    chosen = term_pair_mask(selector, helium.levels, helium.upper, helium.lower)
+    return _summed(helium.bound_bound, chosen)
+
+
+def _summed(values: FloatArray, chosen: BoolArray) -> FloatArray | None:
+    total: FloatArray = values[:, chosen].sum(axis=1)
+    return total if chosen.any() else None
+
+
+def _weighed(weighing: Weighing, species: str) -> str:
+    if species == "H I":
+        return f"{len(weighing.levels)} levels and {', '.join(weighing.lines)}"
+    helium = weighing.helium
+    if helium is None:
+        return "helium was inert"
+    if species == "He I":
+        return f"{len(helium.levels)} levels of He I and {', '.join(helium.lines)}"
+    ion = weighing.helium_ion
+    return "He II in Saha equilibrium" if ion is None else f"{len(ion.levels)} levels of He II"

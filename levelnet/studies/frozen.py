@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -38,7 +38,8 @@ class FrozenHistory:
     integrated : Integrated
         The run that chose the steps: ladder, table, equations.
     solution : Collocated
-        Its equations solved again by collocation; time is ln a.
+        Its equations solved again by collocation; time is ln a. What they remember of lines, they
+        remember of its edges.
     """
 
     setup: Setup
@@ -104,7 +105,8 @@ def freeze(
     trajectory = integrated.trajectory
     if not trajectory.outcome.ok:
         raise SolveError(trajectory.outcome.value, outcome=trajectory.outcome)
-    edges = _thinned(trajectory.time, -np.log1p(np.array(wanted)))
+    longest = integrated.equations.longest_step
+    edges = _thinned(trajectory.time, -np.log1p(np.array(wanted)), longest)
     return on_steps(chosen, integrated, edges)
 
 
@@ -112,23 +114,30 @@ def on_steps(setup: Setup, integrated: Integrated, edges: FloatArray) -> FrozenH
     """Solve the equations of a run by collocation on given steps (ends in ln a)."""
     curve = CubicSpline(integrated.trajectory.time, integrated.trajectory.state)
     guess = curve(stage_times(edges))
-    equations = integrated.equations
+    equations = integrated.equations.forgetful()
+    integrated = replace(integrated, equations=equations)
     start, _ = equilibrium_state(equations, float(edges[0]))
 
     def linearize(log_scale: float, state: FloatArray) -> Linear[Linearized]:
         here = equations.linearized(log_scale, state)
         return Linear(here.rate, here.matrix, here)
 
-    return FrozenHistory(setup, integrated, collocate(linearize, edges, start, guess))
+    solution = collocate(linearize, edges, start, guess, equations.remember)
+    return FrozenHistory(setup, integrated, solution)
 
 
-def _thinned(times: FloatArray, outputs: FloatArray) -> FloatArray:
-    """Merge steps, but not across an output."""
+def _thinned(
+    times: FloatArray, outputs: FloatArray, longest: Callable[[float], float]
+) -> FloatArray:
+    """Merge steps, but not across an output, and to none above the longest from where it starts."""
     is_output = np.min(np.abs(times[:, None] - outputs), axis=1) < 1e-12
     keep, run = [0], 0
     for k in range(1, len(times)):
         run += 1
-        if is_output[k] or run == _THINNING or k == len(times) - 1:
+        last = k == len(times) - 1
+        begin = times[keep[-1]]
+        full = run == _THINNING or (not last and times[k + 1] - begin > longest(begin))
+        if is_output[k] or full or last:
             keep.append(k)
             run = 0
     return np.asarray(times[keep])

@@ -9,7 +9,7 @@ from typing import Literal
 
 from ..atomic.species import HELIUM_N_MAX
 from ..errors import InputError
-from ..escape.helium_lines import HIGHEST_FED
+from ..escape.lines import HIGHEST_FED
 from ..history.cost import HIGHEST_N
 from ..history.setup import Setup
 from .convergence import check_rung_count

@@ -12,7 +12,7 @@ from scipy.interpolate import make_interp_spline
 
 from ..arrays import FloatArray
 from ..background.last_scattering import Observed, observe
-from ..background.parameters import COSMOLOGICAL, TEMPERATURE
+from ..background.parameters import COSMOLOGICAL, TEMPERATURE, helium_derivatives
 from ..background.quadrature import quadrature
 from ..constants import BOLTZMANN_EV_K
 from ..history.equations import Linearized, ionized_and_neutral
@@ -71,7 +71,7 @@ class Scalars:
     ----------
     value : ndarray, shape (n_scalars,)
         J.
-    by_state : ndarray, shape (n_scalars, n_steps, 3, 2)
+    by_state : ndarray, shape (n_scalars, n_steps, 3, n)
         dJ by the states at the stages.
     by_parameter : ndarray, shape (n_scalars, n_parameters)
         dJ by each parameter of the cosmology, states held.
@@ -90,7 +90,7 @@ def scalars_of(history: FrozenHistory, targets: Sequence[Target]) -> Scalars:
     steps = history.solution.stages.shape[0]
     made = Scalars(
         np.zeros(len(targets)),
-        np.zeros((len(targets), steps, 3, 2)),
+        np.zeros((len(targets), steps, 3, history.solution.start.size)),
         np.zeros((len(targets), len(COSMOLOGICAL))),
         (),
     )
@@ -108,10 +108,11 @@ def _put_state(history: FrozenHistory, target: Target, k: int, made: Scalars) ->
     """x_e or T_m at the end of a step."""
     edge = history.edge(target.redshift)
     state = history.solution.state_at(edge)
-    ionized, neutral = ionized_and_neutral(float(state[0]))
     if target.kind == "x_e":
-        made.value[k] = ionized
-        made.by_state[k, edge - 1, 2, 0] = ionized * neutral
+        electrons = _electrons(history, state[None, :])
+        made.value[k] = electrons.fraction[0]
+        made.by_state[k, edge - 1, 2] = electrons.fraction[0] * electrons.by_state[0]
+        made.by_parameter[k] = electrons.fraction[0] * electrons.by_parameter[0]
         return
     cosmology = history.setup.cosmology
     radiation_k = float(cosmology.radiation_temperature_k(target.redshift))
@@ -128,25 +129,56 @@ def _put_observables(history: FrozenHistory, targets: Sequence[Target], made: Sc
         return
     solution, cosmology = history.solution, history.setup.cosmology
     grid = quadrature(cosmology, float(solution.edges[0]), float(solution.edges[-1]))
-    log_odds_at_edges = np.append(solution.start[0], solution.stages[:, 2, 0])
+    at_edges = np.concatenate([solution.start[None, :], solution.stages[:, 2]])
     # A quintic spline is linear in the values at the edges and smooth enough for slopes of g.
     spread = make_interp_spline(solution.edges, np.eye(len(solution.edges)), k=5)(grid.points)
-    log_odds = spread @ log_odds_at_edges
-    pairs = np.array([ionized_and_neutral(u) for u in log_odds.tolist()])
+    electrons = _electrons(history, spread @ at_edges)
+    ratio = cosmology.helium_ratio() if history.equations.helium is not None else 0.0
+    early = 1.0 + 2.0 * ratio
     seen: Observed = observe(
         cosmology,
         grid,
-        pairs[:, 0],
+        electrons.fraction,
         history.equations.scales.thomson,
         [targets[k].redshift for k in depths],
         [targets[k].name for k in wanted],
+        early,
     )
     for row, k in enumerate((*wanted, *depths)):
         made.value[k] = seen.value[row]
         made.by_parameter[k] = seen.by_parameter[row]
-        # d ln x_e = x_HI du
-        moved = (seen.gradient[row] * pairs[:, 1]) @ spread
-        made.by_state[k, :, 2, 0] += moved[1:]
+        made.by_parameter[k] += seen.gradient[row] @ electrons.by_parameter
+        if ratio:
+            # Before the grid helium is ionized twice.
+            before = seen.by_thomson[row] - seen.gradient[row].sum()
+            made.by_parameter[k] += before * 2.0 / early * helium_derivatives(cosmology)
+        moved = np.einsum("p,pi,pe->ei", seen.gradient[row], electrons.by_state, spread)
+        made.by_state[k, :, 2] += moved[1:]
+
+
+class _Electrons(NamedTuple):
+    """x_e at some states, and the derivatives of its ln."""
+
+    fraction: FloatArray  # (n_points,)
+    by_state: FloatArray  # (n_points, n)
+    by_parameter: FloatArray  # (n_points, n_parameters)
+
+
+def _electrons(history: FrozenHistory, states: FloatArray) -> _Electrons:
+    """Count electrons at `states`, shape (n_points, n)."""
+    equations, cosmology = history.equations, history.setup.cosmology
+    by_state, helium = np.zeros(states.shape), np.zeros(len(states))
+    pairs = np.array([ionized_and_neutral(u) for u in states[:, 0].tolist()])
+    fraction = pairs[:, 0].copy()
+    by_state[:, 0] = pairs.prod(axis=1)
+    if equations.helium is not None:
+        ratio = cosmology.helium_ratio()
+        ions = [equations.helium.fractions(one[2:]) for one in states]
+        helium = np.array([one.electrons for one in ions])
+        fraction += ratio * helium
+        by_state[:, 2:] = ratio * np.array([one.electrons_by for one in ions])
+    by_parameter = np.outer(helium / fraction, helium_derivatives(cosmology))
+    return _Electrons(fraction, by_state / fraction[:, None], by_parameter)
 
 
 def _put_line(history: FrozenHistory, target: Target, k: int, made: Scalars) -> NetTransitions:
@@ -168,7 +200,10 @@ def _put_line(history: FrozenHistory, target: Target, k: int, made: Scalars) -> 
             gradients.append(less(found[2], share[i], here.gradient))
             slopes.append(_slopes(history, here, gradients[-1]))
             weight.append(WEIGHTS[i] * gain.value[i] / total)
-            made.by_state[k, j, i] += weight[-1] * _by_state(here, slopes[-1])
+            electrons = history.equations.electrons_by(
+                here.local.conditions, history.solution.stages[j, i]
+            )
+            made.by_state[k, j, i] += weight[-1] * _by_state(here, slopes[-1], electrons)
         made.value[k] += WEIGHTS @ (share * gain.value)
         _put_gain(made.by_state[k, :, :, 0], j, WEIGHTS * share, gain)
     ends = None if lower is None else (upper, lower)
@@ -234,9 +269,11 @@ def _slopes(history: FrozenHistory, here: Linearized, gradient: FlowGradient) ->
     return flow_slopes(kept, local.rates, local.coupling, local.conditions, gradient)
 
 
-def _by_state(here: Linearized, slopes: FlowSlopes) -> FloatArray:
-    """Derivative of a flow by (u, v)."""
+def _by_state(here: Linearized, slopes: FlowSlopes, electrons: FloatArray) -> FloatArray:
+    """Derivative of a flow by the state; `electrons` is that of ln n_e, shape (n,)."""
     c = here.local.conditions
-    by_odds = c.ground_fraction * (slopes.ln_electron_fraction + slopes.ln_ionized_fraction)
-    by_odds -= c.ionized_fraction * slopes.ln_ground_fraction
-    return np.array([by_odds, slopes.ln_matter_temperature])
+    result = slopes.ln_electron_fraction * electrons
+    result[0] += c.ground_fraction * slopes.ln_ionized_fraction
+    result[0] -= c.ionized_fraction * slopes.ln_ground_fraction
+    result[1] += slopes.ln_matter_temperature
+    return np.asarray(result)

@@ -16,6 +16,7 @@ import numpy as np
 
 from ..arrays import FloatArray
 from ..atomic.levels import level_name
+from ..atomic.physics import UNCHANGED, scales
 from ..background.last_scattering import ionized_redshift
 from ..background.parameters import COSMOLOGICAL, helium_mass_fraction
 from ..errors import InputError
@@ -35,8 +36,11 @@ from ..numerics.collocation import adjoint
 from ..numerics.threads import one_blas_thread
 from ..pieces import Pieces
 from .frozen import FrozenHistory, freeze
+from .helium_memory import HeliumMemory, helium_stages
+from .helium_weigh import Helium, weigh_helium
+from .helium_weighing import over
 from .scalars import Scalars, scalars_of
-from .sensitivity import StageRates, line_parameters, node_results, stage_rates, stages
+from .sensitivity import StageRates, hydrogen_results, line_parameters, stage_rates, stages
 from .targets import Target, parse_target
 from .weighing import Weighing
 
@@ -92,8 +96,9 @@ def weigh(
     -----
     J is that of the collocated history; it differs from :func:`levelnet.solve` by no more than
     ``setup.accuracy.relative``. Derivatives are exact to rounding for it, first order in the
-    change of a rate. The start in Saha equilibrium has no part in them: only the derivative of a
-    line strength by the temperature of the radiation misses 1e-6 by it.
+    change of a rate. Lines of He I that light one another hand weights back to the steps that they
+    remember. The start in Saha equilibrium has no part in derivatives: only that of a line strength
+    by the temperature of the radiation misses 1e-6 by it.
 
     References
     ----------
@@ -102,11 +107,11 @@ def weigh(
     tell = progress or (lambda stage, fraction: None)
     if not isinstance(setup, Setup):
         raise InputError(f"setup: a Setup is needed, not {type(setup).__name__}")
-    setup.require_inert_helium("weigh")
     listed = [targets] if isinstance(targets, str) else list(targets)
     if not listed or not all(isinstance(text, str) for text in listed):
         raise InputError("targets: name at least one, such as x_e(900), as text")
     parsed = [parse_target(text) for text in listed]
+    _check_constants(setup)
     check_memory(setup, more_bytes=len(parsed) * bytes_per_target(setup))
     with one_blas_thread():
         _check_targets(setup, parsed)
@@ -127,16 +132,26 @@ def reach(
     redshifts = [t.redshift for t in targets if t.kind in {"x_e", "T_m"}]
     keeps = {level for t in targets if t.kind == "line" for level in (t.upper, t.lower)}
     integral = any(t.kind not in {"x_e", "T_m"} for t in targets)
-    # Integrals start where hydrogen is ionized, and the history with them.
-    ionized = ionized_redshift(setup.cosmology)
+    # Integrals start where everything is ionized, and the history with them.
+    ionized = ionized_redshift(setup.cosmology, setup.helium_recombines)
     return redshifts, tuple(sorted(keeps - {(1, 0)})), ionized if integral else 0.0
 
 
 def bytes_per_target(setup: Setup) -> float:
     """Memory that the derivatives of one target take: one of each line, twice for a while."""
     top, highest = setup.hydrogen.highest_resolved, setup.hydrogen.n_max
-    shells = highest - top
-    return 2.0 * 8.0 * (top**3 / 3.0 + shells * top**2 / 2.0 + shells**2)
+    shells, helium = highest - top, setup.helium.n_max if setup.helium_recombines else 0
+    # Singlets and triplets of He I, and He II.
+    rates = top**3 / 3.0 + shells * top**2 / 2.0 + shells**2 + helium**3
+    return 2.0 * 8.0 * rates
+
+
+def _check_constants(setup: Setup) -> None:
+    if setup.helium_recombines and scales(setup.physics, charge=2) != UNCHANGED:
+        raise InputError(
+            "[physics]: with levels of helium a weighing takes the measured constants; "
+            "set helium.n_max = 0 to weigh hydrogen alone"
+        )
 
 
 def _check_memory_free(chosen: LineTreatment) -> None:
@@ -178,10 +193,11 @@ def _assemble(
     tell: Progress,
 ) -> Weighing:
     ladder = history.integrated.ladder
-    weight, _ = adjoint(history.solution, scalars.by_state)
-    flat = weight.reshape(len(targets), -1, 2)
+    flat, helium = _adjoint(history, scalars, tell)
     rates = stage_rates(history)
     direct = _direct(history, scalars, flat, rates)
+    if helium is not None:
+        direct.parameter[...] += helium.parameter
     by_rate = _by_rates(history, scalars, flat[:, :, 0], rates.scale, tell)
     found = transitions(ladder)
     value = scalars.value
@@ -206,8 +222,25 @@ def _assemble(
         direct.two_photon / value,
         direct.compton / value,
         parameter,
+        None if helium is None else over(helium.weights, value),
+        None if helium is None else over(helium.ion, value),
         notes=notes_of(setup, history.equations.treatment),
     )
+
+
+def _adjoint(
+    history: FrozenHistory, scalars: Scalars, tell: Progress
+) -> tuple[FloatArray, Helium | None]:
+    """Weights of the rates of change, shape (n_scalars, n_points, n), and what helium adds."""
+    count, n_states = len(scalars.value), history.solution.start.size
+    if history.equations.helium is None:
+        weight, _ = adjoint(history.solution, scalars.by_state)
+        return weight.reshape(count, -1, n_states), None
+    along = helium_stages(history)
+    memory = HeliumMemory.of(history, along, count)
+    weight, _ = adjoint(history.solution, scalars.by_state, memory)
+    flat = weight.reshape(count, -1, n_states)
+    return flat, weigh_helium(history, along, memory, flat, tell)
 
 
 def _direct(
@@ -218,7 +251,7 @@ def _direct(
         by_u @ rates.two_photon,
         by_u @ rates.escape,
         by_v @ rates.compton,
-        np.einsum("spx,pxq->sq", weight, rates.parameter) + scalars.by_parameter,
+        np.einsum("spx,pxq->sq", weight[:, :, :2], rates.parameter) + scalars.by_parameter,
     )
     for line in scalars.lines:
         channels = np.array([one.channel for one in line.gradient])
@@ -238,11 +271,11 @@ def _by_rates(
 ) -> NodeWeights:
     """DJ by the ln of every line strength and cross section; `scale` is that of the stages."""
     here = stages(history)
-    sources = [node_results(history, weight * scale, [one.gradient for one in here])]
+    sources = [hydrogen_results(history, weight * scale, [one.gradient for one in here])]
     for line in scalars.lines:
         own = np.zeros_like(weight)
         own[line.scalar] = line.weight
-        sources.append(node_results(history, own, line.gradient))
+        sources.append(hydrogen_results(history, own, line.gradient))
     by_result = np.sum([source.by_result for source in sources], axis=0)
     ladder = history.integrated.ladder
     total = NodeWeights(

@@ -94,7 +94,28 @@ def budget_notes(setup: Setup, uncertainties: Sequence[Uncertainty]) -> tuple[st
         )
     if lines.two_photon == "stimulated":
         notes.append('error budget: the error of two_photon = "stimulated" is not in it')
+    if setup.helium_recombines:
+        notes += _helium_notes(setup)
     return tuple(notes)
+
+
+def _helium_notes(setup: Setup) -> list[str]:
+    """What the default rows of helium stand for under this treatment of its lines."""
+    name, choice = setup.lines.helium or "sobolev", setup.lines.helium_continuum
+    if choice is None:
+        return [
+            f'error budget: what lines.helium = "{name}" leaves out, the H I continuum inside the '
+            "lines of He I, is not in it: per cents of x_e below z = 2200"
+        ]
+    if choice.redistribution != "partial":
+        return [
+            f'error budget: the error of redistribution = "{choice.redistribution}" in the lines '
+            "of He I is not in it: per cents of x_e below z = 2200"
+        ]
+    return [
+        "error budget: the row on escape from 584 A stands for diffusion in the line, a shift of "
+        "known sign that partial redistribution leaves out"
+    ]
 
 
 def joined(budgets: Sequence[ErrorBudget]) -> ErrorBudget:

@@ -11,6 +11,7 @@ from ..atomic.levels import LevelSet
 from ..errors import InputError, Outcome
 from ..history.setup import Setup
 from .budget_record import ErrorBudget
+from .helium_weighing import HeliumWeights, IonWeights, first_of
 from .targets import parse_target
 
 
@@ -52,6 +53,10 @@ class Weighing:
     parameter : ndarray, shape (n_targets, n_parameters), dimensionless
         By the ln of each parameter of the cosmology, the others held; dark energy closes the
         budget.
+    helium : HeliumWeights or None
+        By the rates of He I; None where helium is inert.
+    helium_ion : IonWeights or None
+        By those of He II; None where it recombines in Saha equilibrium too.
     budget : ErrorBudget or None
         What uncertain rates make of these targets, and of further ones such as a band of x_e(z),
         where that was asked for.
@@ -76,6 +81,8 @@ class Weighing:
     two_photon: FloatArray
     compton: FloatArray
     parameter: FloatArray
+    helium: HeliumWeights | None = None
+    helium_ion: IonWeights | None = None
     budget: ErrorBudget | None = None
     notes: tuple[str, ...] = ()
 
@@ -103,7 +110,14 @@ class Weighing:
         """The same for the first `count` targets alone."""
         by_target = ("value", "bound_bound", "bound_free", "escape", "two_photon", "compton")
         cut = {name: getattr(self, name)[:count] for name in (*by_target, "parameter")}
-        return replace(self, targets=self.targets[:count], units=self.units[:count], **cut)
+        return replace(
+            self,
+            targets=self.targets[:count],
+            units=self.units[:count],
+            helium=first_of(self.helium, count),
+            helium_ion=first_of(self.helium_ion, count),
+            **cut,
+        )
 
     def processes(self, target: str) -> dict[str, float]:
         """Derivative by a common factor on each process, and on Lyman-alpha's escape alone.

@@ -19,7 +19,7 @@ from levelnet.studies.budget import (
 )
 from levelnet.studies.budget_record import Contribution
 from levelnet.tables import read_table
-from tests.invented_weighing import plain_weighing
+from tests.invented_weighing import plain_weighing, with_helium
 from tests.small_runs import small_setup
 
 HEADER = "process,upper,lower,sigma,group,source"
@@ -87,6 +87,46 @@ def test_correlated_rows_are_one_row_of_the_summed_derivative(table) -> None:
     assert split.sources == ("x; y",)
 
 
+def test_rows_of_helium_are_sigma_times_its_derivatives(table) -> None:
+    weighed = with_helium(WEIGHED)
+    helium, ion = weighed.helium, weighed.helium_ion
+    assert helium is not None and ion is not None
+    levels = helium.levels
+    to_2p = helium.lower == levels.index(2, 1, 0)
+    from_3 = levels.n[helium.upper] == 3
+    for row, expected in (
+        ("bound_bound,He I 2 3P1,1 1S,0.01,,x", helium.strength[:, 2]),
+        ("bound_bound,He I 2 3P,1 1S,0.01,,x", helium.strength[:, 1:3].sum(axis=1)),
+        ("bound_bound,He I *,He I 1 1S,0.01,,x", helium.strength.sum(axis=1)),
+        ("escape,He I * 1P,,0.01,,x", helium.escape[:, 3]),
+        ("two_photon,He I 2 1S,,0.01,,x", helium.two_photon),
+        ("absorption,,,0.01,,x", helium.absorption),
+        ("bound_bound,He I 3,2 1P,0.01,,x", helium.bound_bound[:, to_2p & from_3].sum(axis=1)),
+        ("bound_free,He I 3 3D,,0.01,,x", helium.bound_free[:, levels.index(3, 2, 1)]),
+        ("bound_free,He I 2-* 1,,0.01,,x", helium.bound_free[:, levels.spin == 0].sum(axis=1)),
+        ("two_photon,He II,,0.01,,x", ion.two_photon),
+        ("escape,He II 2p,,0.01,,x", ion.escape),
+        ("bound_bound,He II *,*,0.01,,x", ion.bound_bound.sum(axis=1)),
+        ("bound_free,He II 2s,,0.01,,x", ion.bound_free[:, 1]),
+    ):
+        found = error_budget(weighed, table(row))
+        np.testing.assert_allclose(found.contribution[:, 0], 0.01 * expected, rtol=1e-12)
+
+
+@pytest.mark.parametrize(
+    ("row", "complaint"),
+    [
+        ("two_photon,He I 2 1S,,0.01,,x", "helium was inert"),
+        ("escape,He II 2p,,0.01,,x", "helium was inert"),
+        ("absorption,,,0.01,,x", "matches nothing"),
+    ],
+)
+def test_rows_of_helium_that_was_not_weighed(table, row: str, complaint: str) -> None:
+    with pytest.raises(InputError, match=complaint) as caught:
+        error_budget(WEIGHED, table(row))
+    assert "\n" not in str(caught.value)
+
+
 def test_a_budget_is_ranked_by_size(table) -> None:
     found = error_budget(
         WEIGHED, table("compton,,,1,,a", "two_photon,2s,,0.5,,b", "escape,2p,,0.5,,c")
@@ -118,13 +158,20 @@ def test_arrays_are_read_only_and_shapes_checked(table) -> None:
 
 
 def test_the_default_table() -> None:
-    rows = load_uncertainties()
+    every = load_uncertainties()
+    rows = [
+        one
+        for one in every
+        if one.where.partition(",")[0].endswith("hydrogen/rate_uncertainties.csv")
+    ]
     assert 6 <= len(rows) <= 10
     assert {one.selector.process for one in rows} == {
         *("two_photon", "bound_bound", "bound_free", "escape", "compton")
     }
-    for one in rows:
+    for one in every:
         assert re.match(r"(published|estimate): .*(19|20)\d\d", one.source), one.source
+    of_helium = {one.selector.species for one in every[len(rows) :]}
+    assert of_helium == {"He I", "He II", "H I"}  # the last is absorption inside its lines
     found = error_budget(WEIGHED, rows)
     assert np.all(np.isfinite(found.sigma))
     assert np.all(found.sigma > 0.0)
@@ -132,7 +179,7 @@ def test_the_default_table() -> None:
 
 def test_default_sigmas_follow_from_the_numbers_that_their_sources_name() -> None:
     """Arithmetic on the published numbers that stand in the column source."""
-    sigma = read_table(room.DEFAULT_TABLE).numbers["sigma"].tolist()
+    sigma = read_table(room.DEFAULT_TABLES[0]).numbers["sigma"].tolist()
     # CODATA 2022, 6.6524587051(62)e-29 m^2 (from memory).
     assert sigma[0] == pytest.approx(6.2e-38 / 6.6524587051e-29, rel=5e-3)
     # 5 kT/(m_e c^2): k = 8.617e-5 eV/K, m_e c^2 = 511 keV.
@@ -148,10 +195,28 @@ def test_default_sigmas_follow_from_the_numbers_that_their_sources_name() -> Non
     ]
 
 
+def test_default_sigmas_of_helium_follow_from_the_numbers_that_their_sources_name() -> None:
+    """Arithmetic on the published numbers that stand in the column source."""
+    rows = {one.selector.text: one.sigma for one in load_uncertainties()}
+    expected = {
+        "absorption": 2 * 137.036**-2,
+        "two_photon He II 2s": 4 * 3.5e-5,
+        "bound_bound He II * He II *": 4 * 137.036**-2,
+        "bound_free He II *": 8 * 137.036**-2,
+        "two_photon He I 2 1S": 51.3 / 51.02 - 1.0,
+        "bound_bound He I 2 3P1 1 1S": 1.0 - 176.4 / 177.6,
+        "bound_bound He I 2 3P2 1 1S": 0.016 / 0.324,
+        "bound_bound He I 2 3S 1 1S": 510.0 / 7870.0,
+        "escape He I 2 1P": 0.0028 / 0.0119,
+    }
+    for text, sigma in expected.items():
+        assert rows[text] == pytest.approx(sigma, rel=4e-2), text
+
+
 def test_damage_to_the_default_table_is_seen(tmp_path: Path, monkeypatch) -> None:
     (tmp_path / "hydrogen").mkdir()
     real = atomic_tables.path("")
-    for name in ("sources.toml", f"{room.DEFAULT_TABLE}.csv"):
+    for name in ("sources.toml", f"{room.DEFAULT_TABLES[0]}.csv"):
         (tmp_path / name).write_bytes((real / name).read_bytes() + b"\n")
     monkeypatch.setattr(atomic_tables, "path", lambda name: tmp_path / name)
     with pytest.raises(TableError, match="checksum differs"):

@@ -26,7 +26,7 @@ from levelnet.store.read import read_content
 from levelnet.store.schema import Content
 from levelnet.store.write import content_of, save
 from levelnet.studies.weighing import Weighing
-from tests.invented_weighing import band_targets, invented_budget, invented_weighing
+from tests.invented_weighing import band_targets, invented_budget, invented_weighing, with_helium
 from tests.same_records import assert_same
 
 TARGETS = ("x_e(900)", "z_*")
@@ -34,12 +34,15 @@ TARGETS = ("x_e(900)", "z_*")
 
 def complete() -> Weighing:
     budget = invented_budget((*TARGETS, *band_targets(5)))
-    return dataclasses.replace(invented_weighing(TARGETS), budget=budget)
+    return dataclasses.replace(with_helium(invented_weighing(TARGETS)), budget=budget)
 
 
 CASES: dict[str, Callable[[], Weighing]] = {
     "with budget": complete,
     "without budget": lambda: invented_weighing(TARGETS),
+    "no second ion": lambda: dataclasses.replace(
+        with_helium(invented_weighing(TARGETS)), helium_ion=None
+    ),
     "one target": lambda: invented_weighing(("z_*",)),
     "whole shells": lambda: invented_weighing(n_max=6, whole_from=4),
     "no transition": lambda: invented_weighing(n_max=2),
@@ -93,6 +96,17 @@ def test_weights_open_in_xarray_by_name(stored: Path) -> None:
         slope = file.cosmology.sel(target="x_e(900)", parameter="baryon_density_h2")
         assert float(slope) == weighing.parameter[0, 1]
         assert float(file.escape.sel(target="z_*", line="2p-1s")) == weighing.escape[1, 0]
+    helium = weighing.helium
+    assert helium is not None
+    with xarray.open_dataset(stored, engine="h5netcdf", group="helium") as file:
+        by = file.line_strength.sel(target="z_*", line="2 3P1-1 1S")
+        assert float(by) == helium.strength[1, 2]
+        chosen = (file.n.values == 3) & (file.l.values == 2) & (file.spin.values == 1)
+        place = helium.levels.index(3, 2, 1)
+        assert file.bound_free.sel(target="z_*").values[chosen].tolist() == [
+            helium.bound_free[1, place]
+        ]
+        assert np.all(file.energy.values[file.upper.values] > file.energy.values[file.lower.values])
     with xarray.open_dataset(stored, engine="h5netcdf", group="budget") as file:
         one = float(file.contribution.sel(target="x_e(1700)", group="two_photon"))
         assert one == weighing.budget.contribution[2, 0]

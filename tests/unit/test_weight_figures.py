@@ -12,12 +12,13 @@ from matplotlib.figure import Figure
 
 from levelnet.errors import InputError
 from levelnet.quantities import OBSERVABLES
+from levelnet.report.bars import MOST_BARS, draw_bars
 from levelnet.report.budget import band_figure
+from levelnet.report.helium_weights import helium_figure
 from levelnet.report.importance import importance_figure
 from levelnet.report.style import house_style, render
 from levelnet.report.weights import (
     OBSERVABLE_SYMBOLS,
-    draw_bars,
     figure_paths,
     file_names,
     ranking_figure,
@@ -25,8 +26,15 @@ from levelnet.report.weights import (
     target_label,
 )
 from levelnet.studies.groups import level_map, shell_map, top_transitions
+from levelnet.studies.helium_groups import top_helium_transitions
 from levelnet.studies.weighing import Weighing
-from tests.invented_weighing import GROUPS, band_targets, invented_budget, invented_weighing
+from tests.invented_weighing import (
+    GROUPS,
+    band_targets,
+    invented_budget,
+    invented_weighing,
+    with_helium,
+)
 
 TARGET = "x_e(900)"
 TARGETS = (TARGET, "z_*")
@@ -244,3 +252,26 @@ def test_unknown_target_is_one_line() -> None:
     for draw in (lambda w, t: importance_figure(w, t, t), ranking_figure):
         with pytest.raises(InputError, match='target "r_s": weighed were'):
             draw(complete(), "r_s")
+
+
+def test_rates_of_helium_are_ranked() -> None:
+    weighing = with_helium(complete())
+    assert weighing.helium is not None
+    figure = helium_figure(weighing, TARGET, "J")
+    panels = figure.axes
+    assert len(panels) == 4
+    lines = [text.get_text() for text in panels[0].get_yticklabels()]
+    assert len(lines) == MOST_BARS
+    values = dict(zip(weighing.helium.lines, weighing.helium.strength[0], strict=True))
+    largest = max(values, key=lambda name: abs(values[name]))
+    assert f"A({largest})" in lines
+    named = [text.get_text() for text in panels[2].get_yticklabels()]
+    assert named == [one.name for one in top_helium_transitions(weighing.helium, 0, MOST_BARS)]
+    assert render(figure, "svg") == render(helium_figure(weighing, TARGET, "J"), "svg")
+
+
+def test_figures_of_helium_are_among_the_files(tmp_path: Path) -> None:
+    weighing = with_helium(invented_weighing((TARGET,)))
+    written = save_weighing_figures(weighing, tmp_path)
+    assert set(written) == set(figure_paths((TARGET,), False, tmp_path, helium=True))
+    assert tmp_path / "helium-x_e-900.svg" in written

@@ -22,7 +22,6 @@ from levelnet.report.departures import departure_map_figure
 from levelnet.store import layout
 from levelnet.store.hdf5 import load
 from levelnet.studies.rung import observables_of
-from levelnet.studies.weigh import weigh
 from tests.same_records import assert_same
 from tests.small_helium import REDSHIFTS, helium_history, helium_setup
 from tests.small_runs import COSMOLOGY
@@ -325,8 +324,6 @@ def test_helium_above_one_is_refused() -> None:
 
 def test_users_that_know_hydrogen_alone_say_so() -> None:
     setup = helium_setup()
-    with pytest.raises(InputError, match=r"helium.n_max = 5: weigh knows hydrogen alone"):
-        weigh(setup, ["x_e(900)"])
     with pytest.raises(InputError, match=r"helium.n_max = 5: a distilled table knows"):
         distill(setup)
 

@@ -28,7 +28,7 @@ from levelnet.studies.budget import load_uncertainties
 from levelnet.studies.groups import top_transitions
 from levelnet.studies.weigh_budget import budget_notes
 from levelnet.studies.weighing import Weighing
-from tests.invented_weighing import PARAMETERS, invented_weighing
+from tests.invented_weighing import PARAMETERS, invented_weighing, with_helium
 
 ROOT = Path(__file__).resolve().parents[2]
 GOOD = """\
@@ -423,3 +423,38 @@ def test_derivatives_are_what_a_changed_setup_does(
     ):
         high, low = (electrons(**{name: centre * np.exp(s * step)}) for s in (1, -1))
         assert found == pytest.approx((high - low) / (2.0 * step), rel=1e-3), name
+
+
+def test_rates_of_helium_on_screen_and_in_json(
+    folder: Path, monkeypatch: pytest.MonkeyPatch, capsys: pytest.CaptureFixture[str]
+) -> None:
+    def engine(setup: Any, targets: Any, **_: Any) -> Weighing:
+        return with_helium(invented_weighing(tuple(targets)))
+
+    monkeypatch.setattr("levelnet.studies.weigh.weigh", engine)
+    words = ["weigh", "good.toml", "--of", "x_e(900)", "--no-budget"]
+    assert main([*words, "--json", "--top", "3"]) == 0
+    values, helium = numbers(capsys), with_helium(invented_weighing(("x_e(900)",))).helium
+    assert helium is not None
+    assert values["helium"]["processes"] == helium.processes(0)
+    lines = values["helium"]["lines"]
+    assert lines["2 3P1-1 1S"] == {"strength": helium.strength[0, 2], "escape": helium.escape[0, 2]}
+    assert len(values["helium"]["top"]) == 3
+    assert set(values["helium_ion"]["processes"]) == {
+        *("two_photon", "bound_bound", "bound_free", "escape")
+    }
+    assert sum(values["helium"]["groups"].values()) == pytest.approx(
+        helium.bound_bound[0].sum() + helium.bound_free[0].sum(), rel=1e-12
+    )
+    assert main([*words, "--output", "w.h5"]) == 0
+    said = capsys.readouterr().out
+    assert main(["show", "w.h5"]) == 0
+    shown = capsys.readouterr().out
+    for text in (
+        "He I line_strength",
+        "He II escape",
+        "He I lines to 1 1S, by Einstein A",
+        "2 3P1-",
+    ):
+        assert text in said
+        assert text in shown
