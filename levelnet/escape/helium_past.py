@@ -100,11 +100,11 @@ class HeliumPast:
                 past = self.continuum.at(then, above)
                 now = math.log(max(float(continuum[line]), 1e-300)), -3.0 - hubble_slope
                 sent = value[line], slope[line]
-                value[line], slope[line], by[line] = _attenuated(delay, past, now, sent)
+                value[line], slope[line], by[line] = attenuated(delay, past, now, sent)
         return HeliumBlueSide(value, slope, by, hubble_slope)
 
 
-def _attenuated(
+def attenuated(
     delay: float, past: tuple[float, float], now: tuple[float, float], sent: tuple[float, float]
 ) -> tuple[float, float, float]:
     """Ln u after the continuum, its slope in ln a, and by ln n_HI now.

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import math
-from typing import NamedTuple
 
 import numpy as np
 
@@ -13,39 +12,18 @@ from ..network.helium_populations import helium_populations
 from ..network.populations import LevelPopulations, populations
 from .course import state_at
 from .equations import SlowEquations
-from .helium import COLDEST_K, HeliumEquations, HeliumFractions
+from .helium import COLDEST_K, HeliumEquations
 from .helium_atom import HeliumAtoms
+from .helium_moment import HeliumMoment
 from .helium_record import HeliumFigures
+from .helium_validity import helium_line_figures
 from .integrate import Integrated
-from .local import Local
 from .outcome import relaxation_hubble
 from .result import Levels, SpeciesPopulations
 
 _SMALLEST_LOG = math.log(1e-300)
 # Levels of helium count for the outcome while so much of it is ionized.
 _COUNTS = 1e-6
-
-
-class HeliumMoment(NamedTuple):
-    """Helium at one output redshift.
-
-    Attributes
-    ----------
-    fractions : HeliumFractions
-        Of its nuclei.
-    first : Local or None
-        Kept levels of He I; None where helium is held.
-    levels : tuple of LevelPopulations
-        He I, then He II where it has levels.
-    relaxation_hubble : float, dimensionless
-        Slowest relaxation of the kept levels over the Hubble rate; infinite where it does not
-        count.
-    """
-
-    fractions: HeliumFractions
-    first: Local | None
-    levels: tuple[LevelPopulations, ...]
-    relaxation_hubble: float
 
 
 def helium_moments(integrated: Integrated, redshift: FloatArray) -> list[HeliumMoment]:
@@ -63,14 +41,14 @@ def _moment(
     log_scale = -math.log1p(redshift)
     state, equations = state_at(integrated, log_scale), integrated.equations
     around = equations.helium_around(log_scale, state)
-    x = HeliumEquations.fractions(state[2:])
+    x, electrons = HeliumEquations.fractions(state[2:]), equations.electron_fraction(state)
     one = atoms.equations.first
     conditions = one.conditions(around, x.single, x.neutral)
     if around.radiation_temperature_k < COLDEST_K:
         held = [_ground_alone(len(atoms.first.levels), x.neutral)]
         if atoms.second is not None:
             held.append(_ground_alone(len(atoms.second.levels), x.single))
-        return HeliumMoment(x, None, tuple(held), math.inf)
+        return HeliumMoment(x, None, tuple(held), math.inf, electrons)
     first = atoms.equations.first_local(around, state[2:])
     found = [helium_populations(atoms.first, first.solution.log_population, conditions)]
     slowest = relaxation_hubble(first) if min(x.neutral, x.single) > _COUNTS else math.inf
@@ -82,7 +60,8 @@ def _moment(
         found.append(populations(factored, second.solution.log_population, conditions))
         if min(x.double, x.single) > _COUNTS:
             slowest = min(slowest, relaxation_hubble(second))
-    return HeliumMoment(x, first, tuple(found), slowest)
+    settling = -float(atoms.equations.rates(around, state[2:]).by_own[0, 0])
+    return HeliumMoment(x, first, tuple(found), slowest, electrons, settling)
 
 
 def _ground_alone(count: int, fraction: float) -> LevelPopulations:
@@ -121,27 +100,25 @@ def helium_species(
 
 
 def helium_figures(
-    integrated: Integrated, atoms: HeliumAtoms, moments: list[HeliumMoment], closure: float
+    integrated: Integrated,
+    atoms: HeliumAtoms,
+    moments: list[HeliumMoment],
+    redshift: FloatArray,
+    closure: float,
 ) -> HeliumFigures:
     """Channels, lines and how it went; `closure` is the miss in the sums of fractions."""
     network, handover = atoms.equations.first, integrated.handover
     ratio = integrated.equations.cosmology.helium_ratio()
-    names = network.lines.names
     flow = np.full((len(moments), len(network.reduced.kept)), np.nan)
-    depth, escape = np.full((2, len(moments), len(names)), np.nan)
     for k, one in enumerate(moments):
         if one.first is not None:
-            said = one.first.coupling.validity
             flow[k] = ratio * one.first.solution.flow
-            depth[k] = said.get("optical_depth", np.nan)
-            escape[k] = said.get("escape_probability", np.nan)
     levels = atoms.first.levels
     return HeliumFigures(
         tuple(f"{levels.name(int(k))}-{levels.name(0)}" for k in atoms.first.kept_position),
         flow,
-        names,
-        depth,
-        escape,
+        np.array([one.settling_hubble for one in moments]),
+        helium_line_figures(integrated, atoms, moments, redshift),
         handover.helium_departure,
         handover.helium_ion_departure,
         atoms.nodes,
