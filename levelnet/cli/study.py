@@ -79,14 +79,19 @@ def asked_requirement(path: Path | None, setup: Setup) -> Requirement | None:
     return requirement
 
 
-def asked_range(setup: Setup, options: argparse.Namespace) -> tuple[float, float]:
-    """The range that the verdict is about, inside the outputs of the setup."""
+def asked_range(
+    setup: Setup, options: argparse.Namespace, usual: tuple[float, float] | None = None
+) -> tuple[float, float]:
+    """The range that the verdict is about, inside the outputs of the setup.
+
+    `usual` is what is taken, as far as the outputs cover it, where nothing is asked.
+    """
     from ..history.integrate import output_redshifts
-    from ..studies.level_checks import covered
+    from ..studies.level_checks import ASKED, covered
     from ..studies.rung import study_setup
     from ..studies.verdict import outputs_between
 
     outputs = output_redshifts(setup)
-    low, high = covered(outputs) if options.between is None else options.between
+    low, high = covered(outputs, usual or ASKED) if options.between is None else options.between
     outputs_between(output_redshifts(study_setup(setup, (low, high))), options.within, low, high)
     return low, high

@@ -16,6 +16,9 @@ _SECONDS_PER_BLOCK = 6e-5
 _SECONDS_PER_EVALUATION = 2.5e-4
 _SECONDS_PER_BORDER_LINE = 1e-8
 _EVALUATIONS = 4000
+# Helium from its start on, and what an output of it takes.
+_SECONDS_PER_HELIUM_RUN = 4.0
+_SECONDS_PER_HELIUM_OUTPUT = 5e-3
 # One cell of a resolved field in one step, with the coarser run that tells the error.
 _SECONDS_PER_CELL = 5e-8
 _FIELD_START = 1900.0  # about where a field is first resolved, 1 + z
@@ -65,6 +68,8 @@ def estimate(setup: Setup) -> Cost:
     node += _border_seconds(top, n - top)
     evaluation = _SECONDS_PER_EVALUATION if setup.accuracy.interpolate else 5.0 * node
     seconds = (nodes + n_out) * node + _EVALUATIONS * evaluation + 1e-8 * n**3
+    if setup.helium_recombines:
+        seconds += _SECONDS_PER_HELIUM_RUN + n_out * _SECONDS_PER_HELIUM_OUTPUT
     return Cost(memory, seconds + _field_seconds(setup))
 
 

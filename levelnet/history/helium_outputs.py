@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 
 import numpy as np
+from scipy.interpolate import CubicSpline
 
 from ..arrays import FloatArray
 from ..network.assembly import Workspace, factor_interior
@@ -19,7 +20,7 @@ from .helium_record import HeliumFigures
 from .helium_validity import helium_line_figures
 from .integrate import Integrated
 from .outcome import relaxation_hubble
-from .result import Levels, SpeciesPopulations
+from .result import Channels, Levels, SpeciesPopulations
 
 _SMALLEST_LOG = math.log(1e-300)
 # Levels of helium count for the outcome while so much of it is ionized.
@@ -113,9 +114,8 @@ def helium_figures(
     for k, one in enumerate(moments):
         if one.first is not None:
             flow[k] = ratio * one.first.solution.flow
-    levels = atoms.first.levels
     return HeliumFigures(
-        tuple(f"{levels.name(int(k))}-{levels.name(0)}" for k in atoms.first.kept_position),
+        _channel_names(atoms),
         flow,
         np.array([one.settling_hubble for one in moments]),
         helium_line_figures(integrated, atoms, moments, redshift),
@@ -126,6 +126,59 @@ def helium_figures(
         max(level.conservation_error for one in moments for level in one.levels),
         closure,
     )
+
+
+def helium_channels(integrated: Integrated, redshift: FloatArray) -> Channels:
+    """How He II reached the ground state of He I, at the outputs and added up from the hand-over.
+
+    Parameters
+    ----------
+    integrated : Integrated
+        A run with helium.
+    redshift : ndarray, shape (n_redshift,), dimensionless
+        Output redshifts.
+
+    Returns
+    -------
+    Channels
+        Rates per hydrogen nucleus; shares are added up over the change of x_HeI. 0 where helium is
+        held.
+    """
+    atoms, times = integrated.helium, -np.log1p(redshift)
+    assert atoms is not None
+    ratio = integrated.equations.cosmology.helium_ratio()
+    net = ratio * np.array([_first_flow(integrated, atoms, s, None) for s in times.tolist()])
+    trajectory = integrated.trajectory
+    steps = zip(trajectory.time.tolist(), trajectory.state, strict=True)
+    flow = np.array([_first_flow(integrated, atoms, s, y) for s, y in steps])
+    gain = [HeliumEquations.fractions(y[2:]).neutral for y in trajectory.state]
+    slope = CubicSpline(trajectory.time, gain)(trajectory.time, 1)
+    added = CubicSpline(trajectory.time, slope[:, None] * _shares(flow)).antiderivative()
+    so_far = added(np.maximum(times, trajectory.time[0]))
+    begun = (so_far.sum(axis=1) > 0.0)[:, None]
+    cumulative = np.where(begun, _shares(so_far), _shares(net))
+    return Channels(_channel_names(atoms), net, _shares(net), cumulative)
+
+
+def _first_flow(
+    integrated: Integrated, atoms: HeliumAtoms, log_scale: float, state: FloatArray | None
+) -> FloatArray:
+    """Net flow to the ground state of He I by channel, s^-1 per helium nucleus; 0 if held."""
+    state = state_at(integrated, log_scale) if state is None else state
+    around = integrated.equations.helium_around(log_scale, state)
+    if around.radiation_temperature_k < COLDEST_K:
+        return np.zeros(len(atoms.first.kept_position))
+    return atoms.equations.first_local(around, state[2:]).solution.flow
+
+
+def _shares(flow: FloatArray) -> FloatArray:
+    total = flow.sum(axis=1, keepdims=True)
+    return np.asarray(np.divide(flow, total, out=np.zeros_like(flow), where=total != 0.0))
+
+
+def _channel_names(atoms: HeliumAtoms) -> tuple[str, ...]:
+    levels = atoms.first.levels
+    return tuple(f"{levels.name(int(k))}-{levels.name(0)}" for k in atoms.first.kept_position)
 
 
 def closure_error(

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import dataclasses
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Iterable, Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -25,6 +25,7 @@ if TYPE_CHECKING:
     from matplotlib.figure import Figure
 
 _NAMES = ("escape", "escape-switches", "escape-channels")
+_BEFORE = {"H I": "", "He I": "helium-"}
 _SPECTRUM = "escape-spectrum"  # only of a reference that resolves the field
 _SPECTRA_AT = (1500.0, 1300.0, 1100.0, 900.0, 700.0)
 _MARKED_N = 10  # Lyman lines are marked up to this n
@@ -61,32 +62,41 @@ def save_escape_figures(
     InputError
         If a file exists and `force` is not set, or `folder` is a file.
     """
-    names = check_escape_figures(folder, study.field is not None, force)
-    makers = {
-        "escape": treatment_figure,
-        "escape-switches": switch_figure,
-        "escape-channels": escape_channel_figure,
-        _SPECTRUM: escape_spectrum_figure,
+    studies = {one.species: one for one in (study, study.helium) if one is not None}
+    names = check_escape_figures(folder, studies, study.field is not None, force)
+    figures = treatment_figure, switch_figure, escape_channel_figure
+    drawn = {
+        f"{_BEFORE[species]}{name}": make(one)
+        for species, one in studies.items()
+        for name, make in zip(_NAMES, figures, strict=True)
     }
-    return save_drawn({name: makers[name](study) for name in names}, folder, progress)
+    if study.field is not None:
+        drawn[_SPECTRUM] = escape_spectrum_figure(study)
+    assert set(drawn) == set(names)
+    return save_drawn(drawn, folder, progress)
 
 
-def check_escape_figures(folder: str | Path, with_field: bool, force: bool) -> tuple[str, ...]:
+def check_escape_figures(
+    folder: str | Path, species: Iterable[str], with_field: bool, force: bool
+) -> tuple[str, ...]:
     """Names of the figures of a study; InputError if `folder` cannot take them.
 
     Parameters
     ----------
     folder : str or Path
         Where to.
+    species : iterable of str
+        Whose lines it compares: "H I", "He I".
     with_field : bool
         Whether the study holds the field of its reference.
     force : bool
         Replace figures that exist.
     """
-    names = (*_NAMES, _SPECTRUM) if with_field else _NAMES
+    names = [f"{_BEFORE[one]}{name}" for one in species for name in _NAMES]
+    names += [_SPECTRUM] * with_field
     paths = tuple(Path(folder) / f"{name}.{end}" for name in names for end in style.FORMATS)
     check_place(folder, paths, force)
-    return names
+    return tuple(names)
 
 
 def treatment_figure(study: EscapeStudy) -> Figure:

@@ -58,10 +58,10 @@ class HeldOutCheck:
     largest_bar_over_correction: FloatArray
 
 
-def covered(redshift: FloatArray) -> tuple[float, float]:
+def covered(redshift: FloatArray, asked: tuple[float, float] = ASKED) -> tuple[float, float]:
     """As much of 200 to 1600 as descending redshifts cover; all of them where that is nothing."""
     ends = float(redshift[-1]), float(redshift[0])
-    low, high = max(ASKED[0], ends[0]), min(ASKED[1], ends[1])
+    low, high = max(asked[0], ends[0]), min(asked[1], ends[1])
     return (low, high) if low < high else ends
 
 
