@@ -28,9 +28,10 @@ _NAMES = ("escape", "escape-switches", "escape-channels")
 _BEFORE = {"H I": "", "He I": "helium-"}
 _SPECTRUM = "escape-spectrum"  # only of a reference that resolves the field
 _SPECTRA_AT = (1500.0, 1300.0, 1100.0, 900.0, 700.0)
+_LONG_NAME = 45  # letters of a name of which no three fit side by side
 _MARKED_N = 10  # Lyman lines are marked up to this n
 # Differences beyond are those of treatments that are no more than bounds.
-_NEAR = 0.1
+_NEAR = {"H I": 0.1, "He I": 0.005}
 
 
 def save_escape_figures(
@@ -111,13 +112,13 @@ def treatment_figure(study: EscapeStudy) -> Figure:
     -------
     matplotlib Figure
         x_e over that of the reference, less 1, in per cent, against redshift. Left: all treatments.
-        Right: those within 10 per cent; shaded: the numerical error of the reference.
+        Right: those within 10 per cent, of He I 0.5; shaded: the numerical error of the reference.
     """
     names, values = study.variants.name, 100.0 * differences(study)
     places = study.treatments.tolist()
     low, high = asked_range(study)
     inside = (study.redshift >= low) & (study.redshift <= high)
-    near = [k for k in places if np.max(np.abs(values[k, inside])) <= 100.0 * _NEAR]
+    near = [k for k in places if np.max(np.abs(values[k, inside])) <= 100.0 * _NEAR[study.species]]
     with style.house_style():
         figure = style.new_figure(style.TWO_COLUMNS_IN, 3.4)
         left, right = figure.subplots(1, 2)
@@ -129,7 +130,8 @@ def treatment_figure(study: EscapeStudy) -> Figure:
         right.fill_between(study.redshift, -bar, bar, color=style.GREY, alpha=0.35, linewidth=0.0)
         _fit(right, study, values[near] if near else values[[study.reference]])
         left.set_ylabel(r"$x_e\,/\,x_e(\mathrm{reference}) - 1$ (%)")
-        figure.legend(*left.get_legend_handles_labels(), loc="outside upper center", ncols=3)
+        columns = 3 if max(map(len, names)) < _LONG_NAME else 2
+        figure.legend(*left.get_legend_handles_labels(), loc="outside upper center", ncols=columns)
     return figure
 
 
@@ -167,6 +169,13 @@ def switch_figure(study: EscapeStudy) -> Figure:
 
 def escape_channel_figure(study: EscapeStudy) -> Figure:
     """Shares of the channels of the reference; see :func:`levelnet.report.plots.shares_figure`."""
+    if study.species == "He I":
+        low, high = asked_range(study)
+        inside = (study.redshift >= low) & (study.redshift <= high)
+        rates = ("net_rate_per_s", "share", "cumulative_share")
+        shown = {name: getattr(study.channels, name)[inside] for name in rates}
+        channels = dataclasses.replace(study.channels, **shown)
+        return shares_figure(channels, study.redshift[inside], np.nan, "$1\\,^1S$")
     seen = dict(
         zip(study.observable_names, study.variants.observable[study.reference], strict=True)
     )
@@ -209,8 +218,9 @@ def _draw(
 ) -> None:
     """One curve for each row of `values`; `looks` are the positions of colour and dash."""
     for curve, label, k in zip(values, labels, looks, strict=True):
-        dash: Any = style.DASHES[k % len(style.DASHES)]
-        colour = style.SERIES[k % len(style.SERIES)]
+        again, place = divmod(k, len(style.SERIES))
+        dash: Any = style.DASHES[(place + again) % len(style.DASHES)]
+        colour = style.SERIES[place]
         axes.plot(study.redshift, curve, color=colour, linestyle=dash, linewidth=1.2, label=label)
     axes.axhline(0.0, color=style.GREY, linewidth=0.6, zorder=0)
     low, high = asked_range(study)

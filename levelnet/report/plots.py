@@ -91,7 +91,9 @@ def channel_figure(history: History) -> Figure:
     return shares_figure(history.channels, history.redshift, peak)
 
 
-def shares_figure(channels: Channels, redshift: FloatArray, peak: float) -> Figure:
+def shares_figure(
+    channels: Channels, redshift: FloatArray, peak: float, ground: str = "1s"
+) -> Figure:
     """Shares of channels at each redshift, and cumulative.
 
     Parameters
@@ -102,6 +104,8 @@ def shares_figure(channels: Channels, redshift: FloatArray, peak: float) -> Figu
         Descending.
     peak : float, dimensionless
         Where the visibility peaks; NaN marks nothing.
+    ground : str
+        The ground state in words.
 
     Returns
     -------
@@ -130,7 +134,7 @@ def shares_figure(channels: Channels, redshift: FloatArray, peak: float) -> Figu
             axes.set_xlabel(r"redshift $z$")
             _mark_redshift(axes, peak, "peak of $g$", at_top=True)
             style.panel_letter(axes, letter)
-        left.set_ylabel(r"share of the net rate to 1s at $z$")
+        left.set_ylabel(f"share of the net rate to {ground} at $z$")
         right.set_ylabel(r"cumulative share down to $z$")
         # Outside, since with many lines no corner is free.
         figure.legend(*left.get_legend_handles_labels(), loc="outside upper center", ncols=3)

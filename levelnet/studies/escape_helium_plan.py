@@ -74,7 +74,11 @@ def helium_plan(setup: Setup, order: Iterable[str] | None = None) -> Plan:
         place(_CORE, "continuum, Doppler core"),
         place(_CORE | {"wings"}, "continuum, partial redistribution"),
         place(best, "continuum, partial redistribution, diffusion"),
-        place(best, "the same, higher lines free", helium_higher_lines="free"),
+        place(
+            best,
+            "continuum, partial redistribution, diffusion, higher lines free",
+            helium_higher_lines="free",
+        ),
     )
     asked = ways(switches, _NEEDS, lambda on, name: place(on, f"helium {name}"))
     return Plan(
