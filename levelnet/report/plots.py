@@ -14,6 +14,7 @@ if TYPE_CHECKING:
     from matplotlib.axes import Axes
     from matplotlib.figure import Figure
 
+_EARLY = 3000.0  # outputs from above this redshift leave the right half of the fractions empty
 _CURVES = 5  # channels drawn one by one; the rest is summed into one curve
 
 
@@ -57,8 +58,10 @@ def _draw_fractions(axes: Axes, history: History) -> None:
     axes.set_xlabel(r"redshift $z$")
     axes.set_ylabel("fraction of hydrogen nuclei")
     _mark_redshift(axes, history.milestones.half_ionized_redshift, "$x_e = 0.5$")
-    # Below the curves near 1 and above the tail of x_e.
-    axes.legend(loc="upper left", bbox_to_anchor=(0.0, 0.86))
+    if redshift[0] > _EARLY:
+        axes.legend(loc="center right")  # right of where both fall
+    else:  # below the curves near 1 and above the tail of x_e
+        axes.legend(loc="upper left", bbox_to_anchor=(0.0, 0.86))
 
 
 def _draw_temperatures(axes: Axes, history: History) -> None:

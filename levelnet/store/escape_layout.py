@@ -120,7 +120,9 @@ def _of_helium(group: Group) -> Group:
     """The same group of the nested study of the lines of He I, on the same grid."""
     shared = (REDSHIFT, OBSERVABLE, OBSERVABLE_UNIT)
     variables = tuple(
-        one if one in shared else dataclasses.replace(one, field=f"helium.{one.field}")
+        one
+        if one in shared or not one.field
+        else dataclasses.replace(one, field=f"helium.{one.field}")
         for one in group.variables
     )
     return Group(f"helium_{group.name}", f"lines of He I: {group.description}", variables)
