@@ -160,6 +160,8 @@ def _sent(integrated: Integrated, atoms: HeliumAtoms, line: int, log_scale: floa
     lines, equations = _lines(atoms), integrated.equations
     above = int(lines.next_above[line])
     delay = math.log(lines.energy_ev[above] / lines.energy_ev[line])
+    if log_scale - delay <= -math.log1p(integrated.handover.redshift):
+        return 0.0  # from equilibrium comes the blackbody
     ends = []
     for time, place in ((log_scale - delay, above), (log_scale, line)):
         around = equations.helium_around(time, state_at(integrated, time))
