@@ -10,7 +10,7 @@ import numpy as np
 from levelnet.escape.lines import Lines
 from levelnet.history.setup import Setup
 from levelnet.studies.escape import run_plan
-from levelnet.studies.escape_plan import STIMULATED, Plan, Variant
+from levelnet.studies.escape_plan import Plan, Variant
 from levelnet.studies.escape_records import EscapeStudy
 from tests.small_runs import small_setup
 
@@ -28,7 +28,7 @@ def cheap_plan(setup: Setup) -> Plan:
         (
             variant("closed", hydrogen="closed"),
             variant("Sobolev"),
-            variant("Sobolev" + STIMULATED, two_photon="stimulated"),
+            variant("Sobolev, 2s decay stimulated", two_photon="stimulated"),
             variant("Sobolev with feedback", hydrogen="sobolev_feedback"),
             variant("everything", hydrogen="sobolev_feedback", two_photon="stimulated"),
         ),

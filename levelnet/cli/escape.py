@@ -6,30 +6,31 @@ import argparse
 import dataclasses
 import time
 from pathlib import Path
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 from .console import Console
 from .distill import worker_count, worker_processes
 from .escape_output import escape_summary, escape_values
-from .output import print_result
+from .output import print_result, time_text
 from .paths import check_folder, check_target
 from .solve import cache_pieces
 from .study import WITHIN, add_files, add_question, add_running, asked_range, asked_requirement
 
 if TYPE_CHECKING:
     from ..history.setup import Setup
+    from ..studies.escape_plan import Plan
     from ..studies.escape_records import EscapeStudy
     from ..studies.escape_verdict import EscapeDemands, EscapeVerdict
     from ..studies.level_records import Question
     from ..studies.requirement import Requirement
 
 NAME = "escape"
-SUMMARY = "find out which treatment of the Lyman lines is good enough"
+SUMMARY = "find out which treatment of the lines to the ground state is good enough"
 DESCRIPTION = (
     "Run a setup with every treatment of the Lyman lines and with each switch of the radiation "
     "field resolved in frequency: alone, taken from the whole, and added one after another. Hold "
     "x_e and the observables against the whole, say which of them is enough, and write all of it "
-    "to an HDF5 file."
+    "to an HDF5 file. Where helium has levels, do the same for the lines of He I."
 )
 EXAMPLE = "levelnet escape setup.toml --within 0.001 --between 200 1600 --plot figures"
 
@@ -43,6 +44,12 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
         help="switches in the order in which they are added (default: stimulated,absorption,"
         "feedback,excited_two_photon,raman,scattering)",
     )
+    parser.add_argument(
+        "--atom",
+        choices=("hydrogen", "helium"),
+        help="compare the lines of this atom alone; with helium, --order takes intercombination,"
+        "continuum,wings,diffusion,feedback,higher_lines (default: all that recombine)",
+    )
     add_question(parser, "treatment")
     add_running(parser, "variants")
 
@@ -54,17 +61,23 @@ def run(options: argparse.Namespace, console: Console) -> int:
 
     setup = load_setup(options.setup)
     requirement = asked_requirement(options.requirement, setup)
-    order = None if options.order is None else _names(options.order)
+    plans = _plans(setup, options)
     target = options.output or Path(f"{options.setup.stem}-escape.h5")
     check_target(target, options.force, options.setup)
     asked = () if requirement is None else tuple(requirement.to_toml().splitlines())
-    question = Question(options.within, *asked_range(setup, options), asked)
-    _check_place(options)
+    questions = [
+        Question(
+            options.within,
+            *asked_range(setup, options, "helium" if plan.species == "He I" else "hydrogen"),
+            asked,
+        )
+        for plan in plans
+    ]
+    _check_place(options, plans)
     start = time.monotonic()
-    study = _study(setup, order, requirement, question, options, console)
+    study = _study(setup, plans, requirement, questions, options, console)
     seconds = time.monotonic() - start
-    study = dataclasses.replace(study, question=question)
-    found, met = judged(study)
+    study = _asked(study, questions)
 
     from ..store import write
 
@@ -72,8 +85,8 @@ def run(options: argparse.Namespace, console: Console) -> int:
     written = [target, *save_figures(study, options.plot, options.force, console)]
     print_result(
         options.json,
-        lambda: escape_values(study, found, met),
-        lambda: escape_summary(study, found, met),
+        lambda: study_values(study),
+        lambda: study_text(study),
         written=written,
         seconds=seconds,
     )
@@ -87,35 +100,56 @@ def _names(text: str) -> tuple[str, ...]:
     return tuple(text.replace(" ", "").split(","))
 
 
-def _check_place(options: argparse.Namespace) -> None:
+def _plans(setup: Setup, options: argparse.Namespace) -> tuple[Plan, ...]:
+    from ..studies.escape import escape_plans
+
+    order = None if options.order is None else _names(options.order)
+    return escape_plans(setup, options.atom, order)
+
+
+def _asked(study: EscapeStudy, questions: list[Question]) -> EscapeStudy:
+    """The study with what was asked of it and of the study in it."""
+    first, *more = questions
+    helium = study.helium
+    if helium is not None:
+        helium = dataclasses.replace(helium, question=more[0])
+    return dataclasses.replace(study, question=first, helium=helium)
+
+
+def _check_place(options: argparse.Namespace, plans: tuple[Plan, ...]) -> None:
     """Refuse a folder that cannot take the figures, before any work."""
     if options.plot is None:
         return
     from ..report.escape import check_escape_figures
 
     check_folder(options.plot)
-    check_escape_figures(options.plot, True, options.force)
+    names = [plan.species for plan in plans]
+    check_escape_figures(options.plot, names, "H I" in names, options.force)
 
 
 def _study(
     setup: Setup,
-    order: tuple[str, ...] | None,
+    plans: tuple[Plan, ...],
     requirement: Requirement | None,
-    question: Question,
+    questions: list[Question],
     options: argparse.Namespace,
     console: Console,
 ) -> EscapeStudy:
-    from ..studies.escape import escape_study
+    from ..studies.escape import expected_seconds, run_plans
     from ..studies.level_requirement import depths_asked
+    from ..studies.rung import study_setup
 
     pieces = None if options.no_cache else cache_pieces(console)
     workers = worker_count(options.workers)
+    grid = study_setup(setup, [z for one in questions for z in (one.low, one.high)])
+    count = sum(len(plan.variants) + (plan.coarser is not None) for plan in plans)
+    seconds = time_text(expected_seconds(grid, plans))
+    console.notice(f"{count} runs, about {seconds} of processor time on {workers} processes")
     with console.progress() as progress, worker_processes(workers) as executor:
-        return escape_study(
-            setup,
-            order=order,
-            optical_depth_to=() if requirement is None else depths_asked(requirement),
-            also_at=(question.low, question.high),
+        return run_plans(
+            grid,
+            plans,
+            optical_depth_to=() if requirement is None else tuple(depths_asked(requirement)),
             executor=executor,
             workers=workers,
             pieces=pieces,
@@ -136,6 +170,18 @@ def judged(study: EscapeStudy) -> tuple[EscapeVerdict, EscapeDemands | None]:
         return found, None
     requirement = parse_requirement("\n".join(asked.requirement), "requirement", None)
     return found, escape_demands(study, requirement)
+
+
+def study_values(study: EscapeStudy) -> dict[str, Any]:
+    """Collect a study and the one in it with their verdicts."""
+    helium = None if study.helium is None else study_values(study.helium)
+    return escape_values(study, *judged(study)) | {"helium": helium}
+
+
+def study_text(study: EscapeStudy) -> str:
+    """Return the summaries of a study and of the one in it."""
+    texts = [escape_summary(one, *judged(one)) for one in (study, study.helium) if one is not None]
+    return "\n\n".join(texts)
 
 
 def save_figures(

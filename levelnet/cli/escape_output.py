@@ -15,7 +15,7 @@ if TYPE_CHECKING:
     from ..studies.escape_verdict import EscapeDemands, EscapeVerdict
 
 # Redshifts at which the effects of the switches are set side by side.
-_SAMPLES = (1300.0, 1100.0, 900.0)
+_SAMPLES = {"H I": (1300.0, 1100.0, 900.0), "He I": (2600.0, 2300.0, 2000.0, 1800.0)}
 _WAYS = ("first", "last", "in order")
 
 
@@ -65,8 +65,7 @@ def escape_summary(
         setup.title or "(no title)",
         row(
             "escape",
-            f"setup {setup.digest}: {len(names)} variants, hydrogen n_max = "
-            f"{setup.hydrogen.n_max}, lyman_lines = {setup.lines.lyman_lines}",
+            f"setup {setup.digest}: {len(names)} variants, {_atom_text(study)}",
         ),
         row("outcome", study.outcome.value),
         "",
@@ -83,6 +82,13 @@ def escape_summary(
     if met is not None:
         lines.append(row("verdict", demands_text(met)))
     return "\n".join([*lines, *(row("note", text) for text in study.notes)])
+
+
+def _atom_text(study: EscapeStudy) -> str:
+    setup = study.setup
+    if study.species == "He I":
+        return f"lines of He I, helium n_max = {setup.helium.n_max}, hydrogen by Sobolev"
+    return f"hydrogen n_max = {setup.hydrogen.n_max}, lyman_lines = {setup.lines.lyman_lines}"
 
 
 def _short(name: str) -> str:
@@ -172,7 +178,7 @@ def _largest_effects(
 
 def _sampled_effects(study: EscapeStudy, curves: dict[str, FloatArray]) -> list[tuple[str, ...]]:
     z = study.redshift
-    places = [int(abs(z - one).argmin()) for one in _SAMPLES if z[-1] <= one <= z[0]]
+    places = [int(abs(z - one).argmin()) for one in _SAMPLES[study.species] if z[-1] <= one <= z[0]]
     heads = [(f"z = {z[k]:.0f}" if way == _WAYS[0] else "", way) for k in places for way in curves]
     rows = [("", *(place for place, _ in heads)), ("switch", *(way for _, way in heads))]
     for k, name in enumerate(study.switches.name):

@@ -2,10 +2,12 @@
 
 from __future__ import annotations
 
+import dataclasses
+from collections.abc import Sequence
 from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
-    from ..arrays import IntArray
+    from ..arrays import FloatArray, IntArray
     from ..history.result import History
 
 _FRACTIONS = (
@@ -13,6 +15,20 @@ _FRACTIONS = (
     "singly_ionized_helium_fraction",
     "doubly_ionized_helium_fraction",
 )
+# Redshifts at which the lines of He I are worth a row.
+_SAMPLES = (3000.0, 2600.0, 2300.0, 2000.0, 1900.0, 1800.0, 1700.0, 1600.0)
+_COLUMNS = {
+    "share": ("share", "{:.2e}"),
+    "optical_depth": ("depth", "{:.2e}"),
+    "escape_probability": ("escape", "{:.2e}"),
+    "incoherent_fraction": ("incoherent", "{:.1e}"),
+    "thick_width_absorption": ("thick width", "{:.1e}"),
+    "continuum_in_line": ("H I in it", "{:.1e}"),
+    "escape_change": ("escape change", "{:+.1e}"),
+    "escape_error": ("x_e by that", "{:+.1e}"),
+    "log_blue_side": ("ln u blue", "{:.3g}"),
+    "log_red_side": ("ln u red", "{:.3g}"),
+}
 _HOW = (
     "handover_departure",
     "handover_ion_departure",
@@ -29,7 +45,47 @@ def helium_values(history: History, rows: list[int] | IntArray) -> dict[str, Any
         return None
     found: dict[str, Any] = {"n_max": history.setup.helium.n_max}
     found |= {name: getattr(history, name)[rows] for name in _FRACTIONS}
-    return found | {name: getattr(history.helium, name) for name in _HOW}
+    found |= {name: getattr(history.helium, name) for name in _HOW}
+    lines, rows = history.helium.lines, helium_rows(history)
+    figures = [one.name for one in dataclasses.fields(lines) if one.name != "names"]
+    figures_of_lines = {
+        name: {figure: getattr(lines, figure)[rows, k] for figure in figures}
+        for k, name in enumerate(lines.names)
+    }
+    return found | {"line_redshift": history.redshift[rows], "line_figures": figures_of_lines}
+
+
+def helium_rows(history: History) -> list[int]:
+    """Outputs nearest to a few redshifts at which He I recombines; each once, ascending."""
+    z = history.redshift
+    wanted = [one for one in _SAMPLES if z[-1] <= one <= z[0]]
+    return sorted({int(abs(z - one).argmin()) for one in wanted})
+
+
+def helium_line_rows(history: History) -> list[tuple[str, ...]]:
+    """Table of figures of the two lines with the largest shares; first rows name the columns.
+
+    Nothing where helium is inert or no output lies where He I recombines.
+    """
+    rows = helium_rows(history)
+    if history.helium is None or not rows:
+        return []
+    lines = history.helium.lines
+    table: list[tuple[str, ...]] = []
+    for line in _largest(lines.share[rows])[:2]:
+        table.append((lines.names[line], *(head for head, _ in _COLUMNS.values())))
+        for k in rows:
+            values = {name: float(getattr(lines, name)[k, line]) for name in _COLUMNS}
+            # What is left of a field after the continuum is nothing long before it is no number.
+            kept = {name: 0.0 if abs(one) < 1e-12 else one for name, one in values.items()}
+            shown = [form.format(kept[name]) for name, (_, form) in _COLUMNS.items()]
+            table.append((f"{history.redshift[k]:.2f}", *shown))
+    return table
+
+
+def _largest(share: FloatArray) -> Sequence[int]:
+    order: Sequence[int] = (-abs(share).max(axis=0)).argsort(kind="stable").tolist()
+    return order
 
 
 def helium_text(history: History) -> str:

@@ -11,7 +11,7 @@ from typing import TYPE_CHECKING, Any
 
 from ..constants import SECONDS_PER_YEAR
 from ..quantities import OBSERVABLES
-from .helium_output import helium_text, helium_values
+from .helium_output import helium_line_rows, helium_text, helium_values
 from .line_output import line_rows, line_values
 
 if TYPE_CHECKING:
@@ -195,6 +195,8 @@ def summary_text(history: History) -> str:
     if history.lines.names:
         table = line_rows(history, sample_rows(history))
         body += ["", *aligned(table, right=True)]
+    if of_helium := helium_line_rows(history):
+        body += ["", *aligned(of_helium, right=True)]
     how = [*_diagnostic_lines(history), *_frequency_lines(history.diagnostics)]
     if helium := helium_text(history):
         how.append(row("helium", helium))

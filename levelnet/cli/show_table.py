@@ -10,7 +10,6 @@ from ..errors import InputError
 from . import escape, levels
 from .console import Console
 from .distill import check_exports, write_exports
-from .escape_output import escape_summary, escape_values
 from .level_output import level_summary, level_values
 from .output import print_result
 from .table_output import distilled_summary, distilled_values, table_summary, table_values
@@ -44,11 +43,10 @@ def show_escape(
     """Print the summary of a study of the escape and draw it where that was asked for."""
     _refuse_all(options, "a study of the escape")
     written = escape.save_figures(study, folder, options.force, console)
-    found, met = escape.judged(study)
     print_result(
         options.json,
-        lambda: escape_values(study, found, met),
-        lambda: escape_summary(study, found, met),
+        lambda: escape.study_values(study),
+        lambda: escape.study_text(study),
         file=options.file,
         written=written,
     )

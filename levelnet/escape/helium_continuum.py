@@ -22,6 +22,13 @@ Redistribution = Literal["doppler", "complete", "partial"]
 _THICK = 1e3
 
 
+_LEAVES_OUT: dict[Redistribution, str] = {
+    "doppler": "photons made in the wings, from which hydrogen takes them sooner, are missing",
+    "complete": "coherent wings neither make nor destroy photons, and here they do",
+    "partial": "coherent scattering shifts photons into the wings; diffusion = true has that",
+}
+
+
 class _Shapes(NamedTuple):
     """Voigt parameter and incoherent fraction of each line, and their slopes.
 
@@ -68,6 +75,11 @@ class HeliumContinuum(HeliumTreatment):
         "Diffusion raises the escape from 584 A by 14 per cent at z = 2000 and 44 at 1850, and "
         "lowers x_e by up to 0.28 per cent near z = 1830 (n_max 10).",
     )
+
+    @property
+    def leaves_out(self) -> str:
+        """Why escape is another with partial redistribution and diffusion."""
+        return _LEAVES_OUT[self.redistribution]
 
     def __post_init__(self) -> None:
         """Refuse what is not known."""

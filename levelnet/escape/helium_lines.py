@@ -65,19 +65,23 @@ class HeliumGroundLines(ResonanceLines):
         What else empties the upper levels.
     hydrogen_cross_section_cm2 : ndarray, cm^2
         Photoionization cross section of H I 1s at line centre (Stobbe 1930).
+    next_above : ndarray of int
+        The line that photons of this frequency have passed last; -1: none.
     lit_by : ndarray of int
-        Line whose red side is this one's blue side; -1: it sees the blackbody.
+        The same where its red side is this one's blue side; -1: it sees the blackbody.
     """
 
     ground_rate_per_s: FloatArray
     others: OtherDecays
     hydrogen_cross_section_cm2: FloatArray
+    next_above: IntArray
     lit_by: IntArray
 
     def __post_init__(self) -> None:
         """Check shapes and make every array read-only."""
         ResonanceLines.__post_init__(self)
         shape = (len(self.names),)
+        frozen_array(self, "next_above", shape, int)
         frozen_array(self, "lit_by", shape, int)
         frozen_array(self, "ground_rate_per_s", shape)
         frozen_array(self, "hydrogen_cross_section_cm2", shape)
@@ -129,6 +133,7 @@ def helium_ground_lines(
     spontaneous = np.sum(others.rate_per_s * others.spontaneous, axis=1)
     hydrogen_chi_ev = const.RYDBERG_EV * reduced_mass_ratio(1) * hydrogen.energy
     cross_section = photoionization_cross_section(1, 0, energy / hydrogen_chi_ev - 1.0)
+    above = _next_above(np.log(energy))
     return HeliumGroundLines(
         tuple(_name(ground, ladders.levels, i) for i in use),
         np.array([kept.index(one) for one in level.tolist()]),
@@ -139,7 +144,9 @@ def helium_ground_lines(
         rate,
         others,
         cross_section * hydrogen.cross_section,
-        _lit_by(np.log(energy), n, feedback, higher == "feedback"),
+        above,
+        # What comes from n >= 3 is a choice of its own.
+        np.where(np.where(n[above] > 2, higher == "feedback", feedback), above, -1),
     )
 
 
@@ -160,11 +167,12 @@ def _name(ground: GroundLines, levels: HeliumLevels, line: int) -> str:
     return f"{term}{j}-1 1S"
 
 
-def _lit_by(log_energy: FloatArray, n: IntArray, low: bool, high: bool) -> IntArray:
-    lit = np.full(len(n), -1)
+def _next_above(log_energy: FloatArray) -> IntArray:
+    above = np.full(len(log_energy), -1)
     for line, own in enumerate(log_energy):
-        above = np.flatnonzero(log_energy > own + _SAME_LINE)
-        if len(above) and (high if n[above[0]] > 2 else low):
+        higher = np.flatnonzero(log_energy > own + _SAME_LINE)
+        if len(higher):
             # Of lines that are one, the highest: 2 3P1 lets the least through.
-            lit[line] = np.flatnonzero(log_energy < log_energy[above[0]] + _SAME_LINE)[-1]
-    return lit
+            one = log_energy < log_energy[higher[0]] + _SAME_LINE
+            above[line] = np.flatnonzero(one)[-1]
+    return above

@@ -106,7 +106,7 @@ class HeliumPast:
                 past = self.continuum.at(then, above)
                 now = math.log(max(float(continuum[line]), 1e-300)), -3.0 - hubble_slope
                 sent = value[line], slope[line]
-                left = _attenuated(delay, past, now, sent)
+                left = attenuated(delay, past, now, sent)
                 value[line], slope[line], by[line], by_past[line], by_sent[line] = left
         return HeliumBlueSide(value, slope, by, hubble_slope, by_sent, by_past)
 
@@ -115,7 +115,7 @@ class HeliumPast:
         return HeliumPast(self.lines, self.red.until(count), self.continuum.until(count))
 
 
-def _attenuated(
+def attenuated(
     delay: float, past: tuple[float, float], now: tuple[float, float], sent: tuple[float, float]
 ) -> tuple[float, float, float, float, float]:
     """Ln u after the continuum, its slope in ln a, and by ln n_HI now, by ln n_HI then, by `sent`.

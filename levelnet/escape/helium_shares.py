@@ -127,6 +127,7 @@ def only(lines: HeliumGroundLines, line: int) -> HeliumGroundLines:
         ),
         lines.hydrogen_cross_section_cm2[here],
         np.array([-1]),
+        np.array([-1]),
     )
 
 

@@ -79,12 +79,19 @@ class HeliumTreatment:
         Whether neutral hydrogen absorbs, inside lines and between them.
     assumes, holds_for : tuple of str
         Short sentences; validity figures and their limits.
+    leaves_out : str
+        Why escape is another with the continuum, partial redistribution and diffusion.
     """
 
     name: ClassVar[str]
     absorbs: ClassVar[bool] = False
     assumes: ClassVar[tuple[str, ...]]
     holds_for: ClassVar[tuple[str, ...]]
+
+    @property
+    def leaves_out(self) -> str:
+        """As said above."""
+        return "neutral hydrogen absorbs inside the line, which this treatment leaves out"
 
     def couple(
         self,

@@ -83,7 +83,7 @@ def helium_treatment(setup: Setup) -> HeliumTreatment:
     if name == "continuum":
         choice = setup.lines.helium_continuum
         assert choice is not None
-        return HeliumContinuum(choice.redistribution)
+        return HeliumContinuum(choice.redistribution, choice.diffusion)
     return HeliumSobolevFeedback() if name == "sobolev_feedback" else HeliumSobolev()
 
 

@@ -4,9 +4,9 @@ from __future__ import annotations
 
 import math
 from dataclasses import replace
-from typing import NamedTuple
 
 import numpy as np
+from scipy.interpolate import CubicSpline
 
 from ..arrays import FloatArray
 from ..network.assembly import Workspace, factor_interior
@@ -15,39 +15,18 @@ from ..network.populations import LevelPopulations, populations
 from ..network.scaled import as_measured
 from .course import state_at
 from .equations import SlowEquations
-from .helium import HeliumEquations, HeliumFractions
+from .helium import HeliumEquations
 from .helium_atom import HeliumAtoms
+from .helium_moment import HeliumMoment
 from .helium_record import HeliumFigures
+from .helium_validity import helium_line_figures
 from .integrate import Integrated
-from .local import Local
 from .outcome import relaxation_hubble
-from .result import Levels, SpeciesPopulations
+from .result import Channels, Levels, SpeciesPopulations
 
 _SMALLEST_LOG = math.log(1e-300)
 # Levels of helium count for the outcome while so much of it is ionized.
 _COUNTS = 1e-6
-
-
-class HeliumMoment(NamedTuple):
-    """Helium at one output redshift.
-
-    Attributes
-    ----------
-    fractions : HeliumFractions
-        Of its nuclei.
-    first : Local or None
-        Kept levels of He I; None where helium is held.
-    levels : tuple of LevelPopulations
-        He I, then He II where it has levels.
-    relaxation_hubble : float, dimensionless
-        Slowest relaxation of the kept levels over the Hubble rate; infinite where it does not
-        count.
-    """
-
-    fractions: HeliumFractions
-    first: Local | None
-    levels: tuple[LevelPopulations, ...]
-    relaxation_hubble: float
 
 
 def helium_moments(integrated: Integrated, redshift: FloatArray) -> list[HeliumMoment]:
@@ -65,14 +44,14 @@ def _moment(
     log_scale = -math.log1p(redshift)
     state, equations = state_at(integrated, log_scale), integrated.equations
     around = equations.helium_around(log_scale, state)
-    x = HeliumEquations.fractions(state[2:])
+    x, electrons = HeliumEquations.fractions(state[2:]), equations.electron_fraction(state)
     one, scales = atoms.equations.first, atoms.equations.scales
     conditions = as_measured(one.conditions(around, x.single, x.neutral), scales)
     if around.radiation_temperature_k < atoms.equations.coldest_k:
         held = [_ground_alone(len(atoms.first.levels), x.neutral)]
         if atoms.second is not None:
             held.append(_ground_alone(len(atoms.second.levels), x.single))
-        return HeliumMoment(x, None, tuple(held), math.inf)
+        return HeliumMoment(x, None, tuple(held), math.inf, electrons)
     first = atoms.equations.first_local(around, state[2:])
     found = [helium_populations(atoms.first, first.solution.log_population, conditions)]
     slowest = relaxation_hubble(first) if min(x.neutral, x.single) > _COUNTS else math.inf
@@ -85,7 +64,8 @@ def _moment(
         found.append(populations(factored, second.solution.log_population, conditions))
         if min(x.double, x.single) > _COUNTS:
             slowest = min(slowest, relaxation_hubble(second))
-    return HeliumMoment(x, first, tuple(found), slowest)
+    settling = -float(atoms.equations.rates(around, state[2:]).by_own[0, 0])
+    return HeliumMoment(x, first, tuple(found), slowest, electrons, settling)
 
 
 def _ground_alone(count: int, fraction: float) -> LevelPopulations:
@@ -133,27 +113,24 @@ def _scaled(levels: Levels, unit: float) -> Levels:
 
 
 def helium_figures(
-    integrated: Integrated, atoms: HeliumAtoms, moments: list[HeliumMoment], closure: float
+    integrated: Integrated,
+    atoms: HeliumAtoms,
+    moments: list[HeliumMoment],
+    redshift: FloatArray,
+    closure: float,
 ) -> HeliumFigures:
     """Channels, lines and how it went; `closure` is the miss in the sums of fractions."""
     network, handover = atoms.equations.first, integrated.handover
     ratio = integrated.equations.cosmology.helium_ratio()
-    names = network.lines.names
     flow = np.full((len(moments), len(network.reduced.kept)), np.nan)
-    depth, escape = np.full((2, len(moments), len(names)), np.nan)
     for k, one in enumerate(moments):
         if one.first is not None:
-            said = one.first.coupling.validity
             flow[k] = ratio * one.first.solution.flow
-            depth[k] = said.get("optical_depth", np.nan)
-            escape[k] = said.get("escape_probability", np.nan)
-    levels = atoms.first.levels
     return HeliumFigures(
-        tuple(f"{levels.name(int(k))}-{levels.name(0)}" for k in atoms.first.kept_position),
+        _channel_names(atoms),
         flow,
-        names,
-        depth,
-        escape,
+        np.array([one.settling_hubble for one in moments]),
+        helium_line_figures(integrated, atoms, moments, redshift),
         handover.helium_departure,
         handover.helium_ion_departure,
         atoms.nodes,
@@ -161,6 +138,59 @@ def helium_figures(
         max(level.conservation_error for one in moments for level in one.levels),
         closure,
     )
+
+
+def helium_channels(integrated: Integrated, redshift: FloatArray) -> Channels:
+    """How He II reached the ground state of He I, at the outputs and added up from the hand-over.
+
+    Parameters
+    ----------
+    integrated : Integrated
+        A run with helium.
+    redshift : ndarray, shape (n_redshift,), dimensionless
+        Output redshifts.
+
+    Returns
+    -------
+    Channels
+        Rates per hydrogen nucleus; shares are added up over the change of x_HeI. 0 where helium is
+        held.
+    """
+    atoms, times = integrated.helium, -np.log1p(redshift)
+    assert atoms is not None
+    ratio = integrated.equations.cosmology.helium_ratio()
+    net = ratio * np.array([_first_flow(integrated, atoms, s, None) for s in times.tolist()])
+    trajectory = integrated.trajectory
+    steps = zip(trajectory.time.tolist(), trajectory.state, strict=True)
+    flow = np.array([_first_flow(integrated, atoms, s, y) for s, y in steps])
+    gain = [HeliumEquations.fractions(y[2:]).neutral for y in trajectory.state]
+    slope = CubicSpline(trajectory.time, gain)(trajectory.time, 1)
+    added = CubicSpline(trajectory.time, slope[:, None] * _shares(flow)).antiderivative()
+    so_far = added(np.maximum(times, trajectory.time[0]))
+    begun = (so_far.sum(axis=1) > 0.0)[:, None]
+    cumulative = np.where(begun, _shares(so_far), _shares(net))
+    return Channels(_channel_names(atoms), net, _shares(net), cumulative)
+
+
+def _first_flow(
+    integrated: Integrated, atoms: HeliumAtoms, log_scale: float, state: FloatArray | None
+) -> FloatArray:
+    """Net flow to the ground state of He I by channel, s^-1 per helium nucleus; 0 if held."""
+    state = state_at(integrated, log_scale) if state is None else state
+    around = integrated.equations.helium_around(log_scale, state)
+    if around.radiation_temperature_k < atoms.equations.coldest_k:
+        return np.zeros(len(atoms.first.kept_position))
+    return atoms.equations.first_local(around, state[2:]).solution.flow
+
+
+def _shares(flow: FloatArray) -> FloatArray:
+    total = flow.sum(axis=1, keepdims=True)
+    return np.asarray(np.divide(flow, total, out=np.zeros_like(flow), where=total != 0.0))
+
+
+def _channel_names(atoms: HeliumAtoms) -> tuple[str, ...]:
+    levels = atoms.first.levels
+    return tuple(f"{levels.name(int(k))}-{levels.name(0)}" for k in atoms.first.kept_position)
 
 
 def closure_error(

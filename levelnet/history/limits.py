@@ -112,15 +112,34 @@ def _error_note(
     meaning: str,
 ) -> list[str]:
     error = np.where(weight > 0.0, values * weight, 0.0)
-    crossed = error > LARGEST_X_E_ERROR
-    if not crossed.any():
+    if not (error > LARGEST_X_E_ERROR).any():
         return []
+    return [crossed_note(name, redshift, figure, values, error, meaning)]
+
+
+def crossed_note(
+    name: str,
+    redshift: FloatArray,
+    figure: str,
+    values: FloatArray,
+    error: FloatArray,
+    meaning: str,
+) -> str:
+    """Warning of a line whose figure means an error of x_e above the limit somewhere.
+
+    Parameters
+    ----------
+    name, figure, meaning : str
+        The line, the figure, and what it says.
+    redshift, values, error : ndarray, shape (n_redshift,), dimensionless
+        Outputs, the figure, and the size of the error of x_e.
+    """
     worst = int(np.argmax(error))
-    return [
-        f"warning: {name}, z = {_span(redshift, crossed)}: {figure} = {values[worst]:.2g} at z = "
-        f"{redshift[worst]:.0f}, where x_e may be off by {100.0 * error[worst]:.1f} % (limit "
-        f"{100.0 * LARGEST_X_E_ERROR:g} %): {meaning}"
-    ]
+    return (
+        f"warning: {name}, z = {_span(redshift, error > LARGEST_X_E_ERROR)}: {figure} = "
+        f"{values[worst]:.2g} at z = {redshift[worst]:.0f}, where x_e may be off by "
+        f"{100.0 * error[worst]:.1f} % (limit {100.0 * LARGEST_X_E_ERROR:g} %): {meaning}"
+    )
 
 
 def _far_note(

@@ -15,6 +15,7 @@ from ..atomic.levels import level_name
 from ..background.quadrature import quadrature
 from ..background.scattering import opacity_per_mpc
 from ..errors import SolveError
+from ..escape.helium_treatment import HeliumTreatment
 from ..network.assembly import (
     FactoredInterior,
     Workspace,
@@ -27,8 +28,9 @@ from ..network.tabulation import TabulatedReduction
 from ..numerics.stepping import Trajectory
 from .course import electron_fraction_at, state_at
 from .equations import ionized_and_neutral
+from .helium_limits import helium_limit_notes
+from .helium_moment import HeliumMoment
 from .helium_outputs import (
-    HeliumMoment,
     closure_error,
     helium_figures,
     helium_moments,
@@ -100,7 +102,10 @@ def assemble_history(setup: Setup, integrated: Integrated, tell: Progress) -> Hi
         closure = closure_error(
             integrated.equations, electron_fraction, np.array([ground, ionized]), helium
         )
-        figures_of_helium = helium_figures(integrated, atoms, moments, closure)
+        figures_of_helium = helium_figures(integrated, atoms, moments, redshift, closure)
+        treatment = atoms.equations.first.treatment
+        assert isinstance(treatment, HeliumTreatment)
+        warnings += helium_limit_notes(redshift, figures_of_helium.lines, treatment)
     return History(
         setup,
         outcome,

@@ -29,7 +29,8 @@ def _drawable(history: History, species: str) -> LevelSet:
     levels = history.levels(species)
     if isinstance(levels, HeliumLevels):
         raise InputError(
-            f'species "{species}": has two levels for each n and l; drawn are "H I" and "He II"'
+            f'species "{species}": has two levels for each n and l; drawn here are "H I" and '
+            '"He II", He I by levelnet.report.helium'
         )
     return levels
 

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import dataclasses
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Iterable, Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -25,11 +25,13 @@ if TYPE_CHECKING:
     from matplotlib.figure import Figure
 
 _NAMES = ("escape", "escape-switches", "escape-channels")
+_BEFORE = {"H I": "", "He I": "helium-"}
 _SPECTRUM = "escape-spectrum"  # only of a reference that resolves the field
 _SPECTRA_AT = (1500.0, 1300.0, 1100.0, 900.0, 700.0)
+_LONG_NAME = 45  # letters of a name of which no three fit side by side
 _MARKED_N = 10  # Lyman lines are marked up to this n
 # Differences beyond are those of treatments that are no more than bounds.
-_NEAR = 0.1
+_NEAR = {"H I": 0.1, "He I": 0.005}
 
 
 def save_escape_figures(
@@ -61,32 +63,41 @@ def save_escape_figures(
     InputError
         If a file exists and `force` is not set, or `folder` is a file.
     """
-    names = check_escape_figures(folder, study.field is not None, force)
-    makers = {
-        "escape": treatment_figure,
-        "escape-switches": switch_figure,
-        "escape-channels": escape_channel_figure,
-        _SPECTRUM: escape_spectrum_figure,
+    studies = {one.species: one for one in (study, study.helium) if one is not None}
+    names = check_escape_figures(folder, studies, study.field is not None, force)
+    figures = treatment_figure, switch_figure, escape_channel_figure
+    drawn = {
+        f"{_BEFORE[species]}{name}": make(one)
+        for species, one in studies.items()
+        for name, make in zip(_NAMES, figures, strict=True)
     }
-    return save_drawn({name: makers[name](study) for name in names}, folder, progress)
+    if study.field is not None:
+        drawn[_SPECTRUM] = escape_spectrum_figure(study)
+    assert set(drawn) == set(names)
+    return save_drawn(drawn, folder, progress)
 
 
-def check_escape_figures(folder: str | Path, with_field: bool, force: bool) -> tuple[str, ...]:
+def check_escape_figures(
+    folder: str | Path, species: Iterable[str], with_field: bool, force: bool
+) -> tuple[str, ...]:
     """Names of the figures of a study; InputError if `folder` cannot take them.
 
     Parameters
     ----------
     folder : str or Path
         Where to.
+    species : iterable of str
+        Whose lines it compares: "H I", "He I".
     with_field : bool
         Whether the study holds the field of its reference.
     force : bool
         Replace figures that exist.
     """
-    names = (*_NAMES, _SPECTRUM) if with_field else _NAMES
+    names = [f"{_BEFORE[one]}{name}" for one in species for name in _NAMES]
+    names += [_SPECTRUM] * with_field
     paths = tuple(Path(folder) / f"{name}.{end}" for name in names for end in style.FORMATS)
     check_place(folder, paths, force)
-    return names
+    return tuple(names)
 
 
 def treatment_figure(study: EscapeStudy) -> Figure:
@@ -101,13 +112,13 @@ def treatment_figure(study: EscapeStudy) -> Figure:
     -------
     matplotlib Figure
         x_e over that of the reference, less 1, in per cent, against redshift. Left: all treatments.
-        Right: those within 10 per cent; shaded: the numerical error of the reference.
+        Right: those within 10 per cent, of He I 0.5; shaded: the numerical error of the reference.
     """
     names, values = study.variants.name, 100.0 * differences(study)
     places = study.treatments.tolist()
     low, high = asked_range(study)
     inside = (study.redshift >= low) & (study.redshift <= high)
-    near = [k for k in places if np.max(np.abs(values[k, inside])) <= 100.0 * _NEAR]
+    near = [k for k in places if np.max(np.abs(values[k, inside])) <= 100.0 * _NEAR[study.species]]
     with style.house_style():
         figure = style.new_figure(style.TWO_COLUMNS_IN, 3.4)
         left, right = figure.subplots(1, 2)
@@ -119,7 +130,8 @@ def treatment_figure(study: EscapeStudy) -> Figure:
         right.fill_between(study.redshift, -bar, bar, color=style.GREY, alpha=0.35, linewidth=0.0)
         _fit(right, study, values[near] if near else values[[study.reference]])
         left.set_ylabel(r"$x_e\,/\,x_e(\mathrm{reference}) - 1$ (%)")
-        figure.legend(*left.get_legend_handles_labels(), loc="outside upper center", ncols=3)
+        columns = 3 if max(map(len, names)) < _LONG_NAME else 2
+        figure.legend(*left.get_legend_handles_labels(), loc="outside upper center", ncols=columns)
     return figure
 
 
@@ -157,6 +169,13 @@ def switch_figure(study: EscapeStudy) -> Figure:
 
 def escape_channel_figure(study: EscapeStudy) -> Figure:
     """Shares of the channels of the reference; see :func:`levelnet.report.plots.shares_figure`."""
+    if study.species == "He I":
+        low, high = asked_range(study)
+        inside = (study.redshift >= low) & (study.redshift <= high)
+        rates = ("net_rate_per_s", "share", "cumulative_share")
+        shown = {name: getattr(study.channels, name)[inside] for name in rates}
+        channels = dataclasses.replace(study.channels, **shown)
+        return shares_figure(channels, study.redshift[inside], np.nan, "$1\\,^1S$")
     seen = dict(
         zip(study.observable_names, study.variants.observable[study.reference], strict=True)
     )
@@ -199,8 +218,9 @@ def _draw(
 ) -> None:
     """One curve for each row of `values`; `looks` are the positions of colour and dash."""
     for curve, label, k in zip(values, labels, looks, strict=True):
-        dash: Any = style.DASHES[k % len(style.DASHES)]
-        colour = style.SERIES[k % len(style.SERIES)]
+        again, place = divmod(k, len(style.SERIES))
+        dash: Any = style.DASHES[(place + again) % len(style.DASHES)]
+        colour = style.SERIES[place]
         axes.plot(study.redshift, curve, color=colour, linestyle=dash, linewidth=1.2, label=label)
     axes.axhline(0.0, color=style.GREY, linewidth=0.6, zorder=0)
     low, high = asked_range(study)

@@ -12,6 +12,7 @@ from ..errors import InputError
 from ..history.result import History
 from . import style
 from .departures import departure_curves_figure, departure_map_figure
+from .helium import helium_departures_figure, helium_figure, helium_lines_figure
 from .plots import channel_figure, history_figure, visibility_figure
 from .spectrum import spectrum_figure
 
@@ -19,6 +20,7 @@ if TYPE_CHECKING:
     from matplotlib.figure import Figure
 
 FIGURE_NAMES = ("history", "departure-map", "departure-curves", "channels", "visibility")
+HELIUM_FIGURE_NAMES = ("helium", "helium-departures", "helium-lines")  # where it recombines
 FIELD_FIGURE_NAME = "spectrum"  # only of a history that holds the radiation field
 
 
@@ -40,16 +42,20 @@ def make_figures(history: History, redshift: float | None = None) -> dict[str, F
         visibility_figure(history),
     )
     figures = dict(zip(FIGURE_NAMES, made, strict=True))
-    return (
-        figures
-        if history.field is None
-        else figures | {FIELD_FIGURE_NAME: spectrum_figure(history)}
-    )
+    if history.field is not None:
+        figures[FIELD_FIGURE_NAME] = spectrum_figure(history)
+    if history.helium is not None:
+        drawn = helium_figure, helium_departures_figure, helium_lines_figure
+        figures |= {n: draw(history) for n, draw in zip(HELIUM_FIGURE_NAMES, drawn, strict=True)}
+    return figures
 
 
-def figure_paths(folder: str | Path, with_field: bool = False) -> tuple[Path, ...]:
-    """Files that :func:`save_figures` writes into `folder`, of a history with the field or not."""
-    names = (*FIGURE_NAMES, FIELD_FIGURE_NAME) if with_field else FIGURE_NAMES
+def figure_paths(
+    folder: str | Path, with_field: bool = False, with_helium: bool = False
+) -> tuple[Path, ...]:
+    """Files that :func:`save_figures` writes into `folder`, of a history with these parts."""
+    names = [*FIGURE_NAMES, *[FIELD_FIGURE_NAME] * with_field]
+    names += HELIUM_FIGURE_NAMES * with_helium
     return tuple(Path(folder) / f"{name}.{end}" for name in names for end in style.FORMATS)
 
 
@@ -87,7 +93,8 @@ def save_figures(
     OSError
         If a file cannot be written; none is left half-written.
     """
-    check_place(folder, figure_paths(folder, history.field is not None), force)
+    parts = history.field is not None, history.helium is not None
+    check_place(folder, figure_paths(folder, *parts), force)
     # Drawn in memory first, so that a figure that fails leaves nothing behind.
     return save_drawn(make_figures(history, redshift), folder, progress)
 

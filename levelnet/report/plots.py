@@ -14,6 +14,7 @@ if TYPE_CHECKING:
     from matplotlib.axes import Axes
     from matplotlib.figure import Figure
 
+_EARLY = 3000.0  # outputs from above this redshift leave the right half of the fractions empty
 _CURVES = 5  # channels drawn one by one; the rest is summed into one curve
 
 
@@ -57,8 +58,10 @@ def _draw_fractions(axes: Axes, history: History) -> None:
     axes.set_xlabel(r"redshift $z$")
     axes.set_ylabel("fraction of hydrogen nuclei")
     _mark_redshift(axes, history.milestones.half_ionized_redshift, "$x_e = 0.5$")
-    # Below the curves near 1 and above the tail of x_e.
-    axes.legend(loc="upper left", bbox_to_anchor=(0.0, 0.86))
+    if redshift[0] > _EARLY:
+        axes.legend(loc="center right")  # right of where both fall
+    else:  # below the curves near 1 and above the tail of x_e
+        axes.legend(loc="upper left", bbox_to_anchor=(0.0, 0.86))
 
 
 def _draw_temperatures(axes: Axes, history: History) -> None:
@@ -91,7 +94,9 @@ def channel_figure(history: History) -> Figure:
     return shares_figure(history.channels, history.redshift, peak)
 
 
-def shares_figure(channels: Channels, redshift: FloatArray, peak: float) -> Figure:
+def shares_figure(
+    channels: Channels, redshift: FloatArray, peak: float, ground: str = "1s"
+) -> Figure:
     """Shares of channels at each redshift, and cumulative.
 
     Parameters
@@ -102,6 +107,8 @@ def shares_figure(channels: Channels, redshift: FloatArray, peak: float) -> Figu
         Descending.
     peak : float, dimensionless
         Where the visibility peaks; NaN marks nothing.
+    ground : str
+        The ground state in words.
 
     Returns
     -------
@@ -130,7 +137,7 @@ def shares_figure(channels: Channels, redshift: FloatArray, peak: float) -> Figu
             axes.set_xlabel(r"redshift $z$")
             _mark_redshift(axes, peak, "peak of $g$", at_top=True)
             style.panel_letter(axes, letter)
-        left.set_ylabel(r"share of the net rate to 1s at $z$")
+        left.set_ylabel(f"share of the net rate to {ground} at $z$")
         right.set_ylabel(r"cumulative share down to $z$")
         # Outside, since with many lines no corner is free.
         figure.legend(*left.get_legend_handles_labels(), loc="outside upper center", ncols=3)

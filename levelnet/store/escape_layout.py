@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import dataclasses
+
 from . import layout
 from .level_layout import OBSERVABLE, OBSERVABLE_UNIT, QUESTION, REDSHIFT
 from .schema import Group, Kind, Layout, Variable, describe
@@ -38,6 +40,9 @@ VARIANTS = Group(
         layout.CHANNEL,
         Variable("variant", ("variant",), "", "name of the variant", "variants.name", "text"),
         _by_variant("lines", "", "table [lines] of its setup, as TOML", kind="text"),
+        _by_variant(
+            "intercombination_rate_per_s", "s-1", "rate of 2 3P1 to 1 1S of He I; NaN: inert"
+        ),
         _by_variant("outcome", "", "how it ended: name of an Outcome", kind="text"),
         _SWITCH,
         _by_variant("switched_on", "1", "1 for a switch that is on", "switch", kind="int64"),
@@ -110,13 +115,30 @@ REFERENCE = Group(
     ),
 )
 
+
+def _of_helium(group: Group) -> Group:
+    """The same group of the nested study of the lines of He I, on the same grid."""
+    shared = (REDSHIFT, OBSERVABLE, OBSERVABLE_UNIT)
+    variables = tuple(
+        one
+        if one in shared or not one.field
+        else dataclasses.replace(one, field=f"helium.{one.field}")
+        for one in group.variables
+    )
+    return Group(f"helium_{group.name}", f"lines of He I: {group.description}", variables)
+
+
 ESCAPE_LAYOUT = Layout(
     "levelnet study of escape",
     1,
     "a study of the escape",
     layout.ROOT_ATTRIBUTES,
     (VARIANTS, SWITCHES, REFERENCE),
-    (layout.FIELD, QUESTION),
+    (
+        layout.FIELD,
+        QUESTION,
+        *(_of_helium(one) for one in (VARIANTS, SWITCHES, REFERENCE, QUESTION)),
+    ),
 )
 
 

@@ -28,6 +28,10 @@ def _by_line(name: str, long_name: str) -> Variable:
     return Variable(name, ("redshift", "line"), "1", long_name, f"lines.{name}")
 
 
+def _by_helium_line(name: str, long_name: str) -> Variable:
+    return Variable(name, ("redshift", "line"), "1", long_name, f"helium.lines.{name}")
+
+
 def _by_channel(name: str, units: str, long_name: str) -> Variable:
     return Variable(name, ("redshift", "channel"), units, long_name, f"channels.{name}")
 
@@ -246,10 +250,12 @@ HELIUM = Group(
             "net transitions to the ground state per hydrogen nucleus",
             "helium.net_rate_per_s",
         ),
-        Variable("line", ("line",), "", "level or term and ground state", "helium.lines", "text"),
-        _of_helium("optical_depth", "Sobolev optical depth", ("redshift", "line")),
-        _of_helium(
-            "escape_probability", "chance that a photon of the line escapes", ("redshift", "line")
+        Variable(
+            "settling_hubble",
+            ("redshift",),
+            "1",
+            "rate at which deviations of the ionization of He I die out, over the expansion rate",
+            "helium.settling_hubble",
         ),
         _of_helium("handover_departure", "relative lag of x_HeI at the hand-over"),
         _of_helium("handover_ion_departure", "relative lag of x_HeII/x_HeIII at the hand-over"),
@@ -257,6 +263,34 @@ HELIUM = Group(
         _of_helium("interpolation_error", "largest error off the nodes of ln of any reduced rate"),
         _of_helium("conservation_error", "largest relative imbalance of the populations"),
         _of_helium("closure_error", "largest miss in sums of fractions, and in charge over x_e"),
+    ),
+)
+
+HELIUM_LINES = Group(
+    "helium_lines",
+    "validity figures of the lines of He I to its ground state; NaN where helium is held as it is",
+    (
+        REDSHIFT,
+        Variable(
+            "line", ("line",), "", "level or term and ground state", "helium.lines.names", "text"
+        ),
+        _by_helium_line("optical_depth", "Sobolev optical depth"),
+        _by_helium_line("escape_probability", "chance that a photon of the line escapes"),
+        _by_helium_line("share", "part of the net flow to the ground state"),
+        _by_helium_line("flow_response", "d ln net flow to the ground state by ln escape"),
+        _by_helium_line("damping_parameter", "Voigt parameter of the natural width"),
+        _by_helium_line("incoherent_fraction", "chance that a line photon is lost, not scattered"),
+        _by_helium_line("thick_width_scattering", "width over frequency thick to scattering"),
+        _by_helium_line("thick_width_absorption", "width over frequency thick to absorption"),
+        _by_helium_line("continuum_depth", "depth of the H I continuum per ln of frequency"),
+        _by_helium_line("continuum_in_core", "depth of the H I continuum in a Doppler width"),
+        _by_helium_line("continuum_in_line", "depth of the H I continuum where the line is thick"),
+        _by_helium_line("escape_change", "relative change of escape with all that is known of it"),
+        _by_helium_line("log_blue_side", "ln of occupation over blackbody on the blue side"),
+        _by_helium_line("log_red_side", "ln of occupation over blackbody on the red side"),
+        _by_helium_line("unseen_feedback", "part of the line's drive missing from the line above"),
+        _by_helium_line("escape_error", "relative change of x_e by escape_change, estimate"),
+        _by_helium_line("feedback_error", "relative change of x_e by unseen_feedback, estimate"),
     ),
 )
 
@@ -294,7 +328,7 @@ HISTORY_LAYOUT = Layout(
     "a history",
     ROOT_ATTRIBUTES,
     FIXED_GROUPS,
-    (*(species_group(name) for name in SPECIES_GROUPS), FIELD, HELIUM),
+    (*(species_group(name) for name in SPECIES_GROUPS), FIELD, HELIUM, HELIUM_LINES),
 )
 
 
@@ -303,7 +337,7 @@ def groups_of(
 ) -> tuple[Group, ...]:
     """All groups of a file with these species and parts, in the order of writing."""
     some = (HISTORY, *(species_group(name) for name in species), *FIXED_GROUPS[1:])
-    return (*some, *[FIELD] * with_field, *[HELIUM] * with_helium)
+    return (*some, *[FIELD] * with_field, *[HELIUM, HELIUM_LINES] * with_helium)
 
 
 def describe_layout() -> str:

@@ -22,8 +22,17 @@ def all_fields(content: Content, kind: Layout) -> dict[str, Any]:
     parts: dict[str, Any] = {}
     for group in (*kind.required, *kind.optional):
         if group.name in content.groups:
-            parts |= fields_of(content, group)
+            merge(parts, fields_of(content, group))
     return parts
+
+
+def merge(parts: dict[str, Any], more: dict[str, Any]) -> None:
+    """Add the fields of another group; a record may lie in several."""
+    for name, value in more.items():
+        if isinstance(value, dict) and name in parts:
+            merge(parts[name], value)
+        else:
+            parts[name] = value
 
 
 def fields_of(content: Content, group: Group) -> dict[str, Any]:

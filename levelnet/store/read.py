@@ -11,7 +11,7 @@ from typing import TYPE_CHECKING, Any
 from ..atomic.helium_levels import HeliumLevels
 from ..atomic.levels import LevelSet
 from ..errors import FileFormatError, InputError, LevelnetError
-from ..history.helium_record import HeliumFigures
+from ..history.helium_record import HeliumFigures, HeliumLineFigures
 from ..history.line_figures import LineFigures
 from ..history.result import (
     Channels,
@@ -27,7 +27,7 @@ from .digest import content_digest, seal_fault
 from .escape_layout import ESCAPE_LAYOUT
 from .hdf5 import Damage, load
 from .level_layout import LEVEL_LAYOUT
-from .parts import all_fields, fields_of, outcome_of
+from .parts import all_fields, fields_of, merge, outcome_of
 from .schema import Content, Layout
 from .study_makers import escape_study_of, level_study_of, weighing_of
 from .table_layout import DISTILLED_LAYOUT, TABLE_LAYOUT
@@ -147,7 +147,7 @@ def history_of(content: Content) -> History:
         if own is not None:
             levels = _levels_of(group.species, own.pop("levels"))
             populations.append(SpeciesPopulations(name=group.species, levels=levels, **own))
-        parts |= fields
+        merge(parts, fields)
     field, helium = parts.pop("field", None), parts.pop("helium", None)
     return History(
         setup=parse_setup(str(content.attributes["setup"]), "stored setup"),
@@ -158,9 +158,13 @@ def history_of(content: Content) -> History:
         milestones=Milestones(**parts.pop("milestones")),
         diagnostics=Diagnostics(**parts.pop("diagnostics")),
         field=None if field is None else RadiationField(**field),
-        helium=None if helium is None else HeliumFigures(**helium),
+        helium=None if helium is None else _helium_of(helium),
         **parts,
     )
+
+
+def _helium_of(given: dict[str, Any]) -> HeliumFigures:
+    return HeliumFigures(lines=HeliumLineFigures(**given.pop("lines")), **given)
 
 
 def _levels_of(species: str, given: dict[str, Any]) -> LevelSet | HeliumLevels:

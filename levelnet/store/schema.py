@@ -50,9 +50,10 @@ class Group:
     species: str = ""
 
     @property
-    def part(self) -> str:
-        """Field of the record that an optional group holds."""
-        return next(one.field for one in self.variables if "." in one.field).partition(".")[0]
+    def part(self) -> tuple[str, ...]:
+        """Fields, each in the one before, that lead to the part an optional group holds."""
+        field = next(one.field for one in self.variables if "." in one.field)
+        return tuple(field.split(".")[:-1])
 
     @property
     def attributes(self) -> dict[str, str]:

@@ -2,13 +2,16 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from typing import TYPE_CHECKING, Any
 
 from ..atomic.helium_levels import HeliumLevels
 from ..atomic.levels import LevelSet
-from ..errors import FileFormatError
+from ..errors import FileFormatError, Outcome
+from ..escape.lines import Lines
 from ..history.result import Channels, RadiationField
-from ..history.setup import parse_setup
+from ..history.setup import Setup, parse_setup
+from ..records import build
 from .escape_layout import ESCAPE_LAYOUT
 from .level_layout import LEVEL_LAYOUT
 from .parts import all_fields, outcome_of
@@ -92,14 +95,34 @@ def level_study_of(content: Content) -> LevelStudy:
 
 def escape_study_of(content: Content) -> EscapeStudy:
     """Make the study that :func:`levelnet.store.write.content_of` took apart."""
+    parts = all_fields(content, ESCAPE_LAYOUT)
+    helium = parts.pop("helium", None)
+    setup = parse_setup(str(content.attributes["setup"]), "stored setup")
+    found = _escape_study(parts, setup, outcome_of(content))
+    if helium is None:
+        return found
+    shared = {name: parts[name] for name in _SHARED}
+    at = int(helium["reference"])
+    name = helium["variants"]["outcome"][at]
+    if name not in Outcome.__members__:
+        raise FileFormatError(f'outcome "{name}" is not known to this levelnet')
+    inner = _escape_study(helium | shared, setup, Outcome[name])
+    return replace(found, helium=replace(inner, setup=_reference_setup(inner)))
+
+
+# What a study of helium within one of hydrogen has in common with it.
+_SHARED = ("redshift", "observable_names", "observable_units")
+
+
+def _escape_study(given: dict[str, Any], setup: Setup, outcome: Outcome) -> EscapeStudy:
     from ..studies.escape_records import EscapeStudy, NumericalError, Switches, Variants
     from ..studies.level_records import Question
 
-    parts = all_fields(content, ESCAPE_LAYOUT)
+    parts = dict(given)
     field, question = parts.pop("field", None), parts.pop("question", None)
     return EscapeStudy(
-        setup=parse_setup(str(content.attributes["setup"]), "stored setup"),
-        outcome=outcome_of(content),
+        setup=setup,
+        outcome=outcome,
         variants=Variants(**parts.pop("variants")),
         switches=Switches(**parts.pop("switches")),
         reference_error=NumericalError(**parts.pop("reference_error")),
@@ -107,4 +130,15 @@ def escape_study_of(content: Content) -> EscapeStudy:
         field=None if field is None else RadiationField(**field),
         question=None if question is None else Question(**question),
         **parts,
+    )
+
+
+def _reference_setup(study: EscapeStudy) -> Setup:
+    """The setup of the reference, from that of another variant and its own lines."""
+    at = study.reference
+    rate = float(study.variants.intercombination_rate_per_s[at])
+    return replace(
+        study.setup,
+        lines=build(Lines, study.variants.chosen(at)),
+        helium=replace(study.setup.helium, intercombination_rate_per_s=rate),
     )

@@ -140,10 +140,20 @@ def _content(kind: Layout, record: Record, setup: Setup) -> Content:
     outcome = getattr(record, "outcome", None)
     if outcome is not None:
         _add_outcome(content, outcome)
-    optional = [group for group in kind.optional if getattr(record, group.part) is not None]
+    optional = [group for group in kind.optional if _holds(record, group)]
     for group in (*kind.required, *optional):
         _add_group(content, group, record, None)
     return content
+
+
+def _holds(record: Record, group: Group) -> bool:
+    """Whether the record has what an optional group is made of; it may lie in another part."""
+    part: Any = record
+    for name in group.part:
+        part = getattr(part, name)
+        if part is None:
+            return False
+    return True
 
 
 def _add_outcome(content: Content, outcome: Outcome) -> None:

@@ -8,15 +8,17 @@ from collections.abc import Iterable, Iterator
 from concurrent.futures import Executor
 from contextlib import contextmanager
 from functools import partial
+from typing import Literal
 
 import numpy as np
 
 from ..arrays import FloatArray
-from ..history.cost import check_memory
+from ..history.cost import check_memory, estimate
 from ..history.integrate import Progress, output_redshifts
 from ..history.result import Channels
 from ..history.setup import Setup
 from ..pieces import FolderPieces, MemoryPieces, Pieces
+from .escape_helium_plan import helium_plan
 from .escape_plan import Plan, escape_plan, variant_setup
 from .escape_records import EscapeStudy, NumericalError, Switches, Variants
 from .escape_run import Job, VariantResult, compute_variant
@@ -38,12 +40,12 @@ def escape_study(
     pieces: Pieces | None = None,
     progress: Progress | None = None,
 ) -> EscapeStudy:
-    """Find out how well each treatment of the Lyman lines gives the history.
+    """Find out how well each treatment of the Lyman lines, and of those of He I, gives the history.
 
     Parameters
     ----------
     setup : Setup
-        Cosmology, atom, grid and lyman_lines are kept, and of [lines.transfer] what is no switch;
+        Cosmology, atoms, grid and lyman_lines are kept, and of [lines.transfer] what is no switch;
         the treatment that it names does not count. The study has a grid of its own: the output
         redshifts of the setup, and as many between that no step in ln(1 + z) exceeds 0.03.
     order : iterable of str, optional
@@ -65,7 +67,8 @@ def escape_study(
     Returns
     -------
     EscapeStudy
-        Every history, which is which, and what numerics leave in the reference.
+        Every history, which is which, and what numerics leave in the reference; in `helium` the
+        same of the lines of He I, where helium recombines.
 
     Raises
     ------
@@ -77,25 +80,81 @@ def escape_study(
 
     Notes
     -----
-    The reference is the field resolved in frequency with all its switches. What it leaves out
-    (collisions, helium, lines above lyman_lines) no difference between the variants shows.
+    The reference of hydrogen is the field resolved in frequency with all its switches; that of He I
+    the continuum with partial redistribution, diffusion, feedback and higher lines. What these
+    leave out (collisions, lines above lyman_lines) no difference between the variants shows.
 
     References
     ----------
     Rubino-Martin, Chluba & Sunyaev 2008, Astron. Astrophys. 485, 377; Hirata 2008, Phys. Rev. D
     78, 023001; Chluba & Thomas 2011, Mon. Not. R. Astron. Soc. 412, 748 (corrections to the escape
-    of Lyman-alpha; from memory).
+    of Lyman-alpha; from memory). Switzer & Hirata 2008, Phys. Rev. D 77, 083006 (He I).
     """
-    plan = escape_plan(setup, order)
-    return run_plan(
+    return run_plans(
         study_setup(setup, also_at),
-        plan,
+        escape_plans(setup, order=order),
         optical_depth_to=tuple(optical_depth_to),
         executor=executor,
         workers=workers,
         pieces=pieces,
         progress=progress,
     )
+
+
+def escape_plans(
+    setup: Setup,
+    atom: Literal["hydrogen", "helium"] | None = None,
+    order: Iterable[str] | None = None,
+) -> tuple[Plan, ...]:
+    """Plans for :func:`run_plans`.
+
+    Parameters
+    ----------
+    setup : Setup
+        The setup.
+    atom : "hydrogen" or "helium", optional
+        Whose lines are compared; None: those of hydrogen, then of helium where it recombines.
+    order : iterable of str, optional
+        In which the switches of the first plan are added; with ``atom = "helium"`` those of
+        :data:`levelnet.studies.escape_helium_plan.HELIUM_SWITCHES`.
+    """
+    if atom == "helium":
+        return (helium_plan(setup, order),)
+    plan = escape_plan(setup, order)
+    both = atom is None and setup.helium_recombines
+    return (plan, helium_plan(setup)) if both else (plan,)
+
+
+def expected_seconds(setup: Setup, plans: Iterable[Plan]) -> float:
+    """Process time of all variants in s, to a factor of two or three; `setup` as in the study."""
+    jobs = [job for plan in plans for job in _jobs(study_setup(setup), plan)]
+    return sum(estimate(job.setup).seconds for job in jobs)
+
+
+def run_plans(
+    setup: Setup,
+    plans: tuple[Plan, ...],
+    *,
+    optical_depth_to: tuple[float, ...] = (),
+    executor: Executor | None = None,
+    workers: int = 1,
+    pieces: Pieces | None = None,
+    progress: Progress | None = None,
+) -> EscapeStudy:
+    """Run one plan, or that of hydrogen with that of helium in it; see :func:`escape_study`."""
+    first, *more = (
+        run_plan(
+            setup,
+            plan,
+            optical_depth_to=optical_depth_to,
+            executor=executor,
+            workers=workers,
+            pieces=pieces,
+            progress=progress,
+        )
+        for plan in plans
+    )
+    return dataclasses.replace(first, helium=more[0]) if more else first
 
 
 def run_plan(
@@ -122,7 +181,7 @@ def run_plan(
             [jobs[k] for k in left], [costs[k] for k in left], task, executor, progress, "variants"
         )
     done |= zip(left, found, strict=True)
-    return _assemble(reference.setup, plan, [done[k] for k in range(len(jobs))])
+    return _assemble(setup, plan, [done[k] for k in range(len(jobs))])
 
 
 def _jobs(setup: Setup, plan: Plan) -> list[Job]:
@@ -140,6 +199,7 @@ def _jobs(setup: Setup, plan: Plan) -> list[Job]:
             one,
             () if one.lines.hydrogen == "closed" else keeps,
             variant is plan.variants[plan.reference],
+            plan.species,
         )
         for variant, one in zip(variants, setups, strict=True)
     ]
@@ -159,15 +219,16 @@ def _shared(pieces: Pieces | None, executor: Executor | None) -> Iterator[Pieces
 
 def _assemble(setup: Setup, plan: Plan, results: list[VariantResult]) -> EscapeStudy:
     reference = results[plan.reference]
+    own = variant_setup(setup, plan.variants[plan.reference])
     coarser = None if plan.coarser is None else results[-1]
     count = len(plan.variants)
     return EscapeStudy(
-        setup,
+        own,
         reference.outcome,
         output_redshifts(setup),
         reference.observable_names,
         reference.observable_units,
-        _variants(plan, results[:count]),
+        _variants(setup, plan, results[:count]),
         np.array(plan.treatments),
         plan.reference,
         Switches(
@@ -184,14 +245,16 @@ def _assemble(setup: Setup, plan: Plan, results: list[VariantResult]) -> EscapeS
     )
 
 
-def _variants(plan: Plan, results: list[VariantResult]) -> Variants:
+def _variants(setup: Setup, plan: Plan, results: list[VariantResult]) -> Variants:
     channels = results[plan.reference].channels.names
     import tomli_w
 
     texts = [dataclasses.asdict(one.lines) for one in plan.variants]
+    rates = [variant_setup(setup, one).helium.intercombination_rate_per_s for one in plan.variants]
     return Variants(
         tuple(one.name for one in plan.variants),
         tuple(tomli_w.dumps(_without_none(one)) for one in texts),
+        np.array([np.nan if one is None else one for one in rates]),
         tuple(one.outcome.name for one in results),
         np.array([[name in on for name in plan.switches] for on in plan.switched_on]),
         np.array([one.electron_fraction for one in results]),

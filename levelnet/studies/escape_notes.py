@@ -6,6 +6,7 @@ import math
 
 import numpy as np
 
+from ..arrays import FloatArray
 from ..errors import Outcome
 from .escape_records import EscapeStudy
 from .escape_verdict import (
@@ -13,17 +14,35 @@ from .escape_verdict import (
     EscapeVerdict,
     Worse,
     largest_difference,
+    safe_ranges,
     worse_than_absent,
 )
 from .level_checks import covered
 from .verdict import outputs_between
 
+WITHIN = 1e-3
+"""Relative error of x_e that is allowed where nothing else is asked."""
+
+_LEFT_OUT = {
+    "H I": "collisions, lines above lyman_lines, two-photon decay above highest_two_photon_n",
+    "He I": "collisions, recoil, time dependence across a line, two-photon decay from above 2 1S, "
+    "what the resolved field of hydrogen does; escape with diffusion is right to 2e-3",
+}
+
 
 def asked_range(study: EscapeStudy) -> tuple[float, float]:
-    """Redshifts between which errors count: those asked, or as much of 200 to 1600 as there is."""
+    """Redshifts between which errors count: those asked, or as much of the usual as there is.
+
+    The usual is 200 to 1600, and for lines of He I 1600 to 3500.
+    """
     if study.question is not None:
         return study.question.low, study.question.high
-    return covered(study.redshift)
+    return usual_range(study.redshift, study.species)
+
+
+def usual_range(redshift: FloatArray, species: str) -> tuple[float, float]:
+    """As much as the outputs cover of where the species recombines."""
+    return covered(redshift, "helium" if species == "He I" else "hydrogen")
 
 
 def verdict_texts(study: EscapeStudy, found: EscapeVerdict) -> tuple[str, ...]:
@@ -109,10 +128,10 @@ def escape_notes(study: EscapeStudy) -> tuple[str, ...]:
         *_outcome_notes(study),
         f"errors are differences from the reference, {study.variants.name[study.reference]}, whose "
         f"own numerical error of x_e is at most {percent(own)} there; what its physics leaves out "
-        "(collisions, helium, lines above lyman_lines, two-photon decay above "
-        "highest_two_photon_n) is in none of them",
+        f"({_LEFT_OUT[study.species]}) is in none of them",
         *_check_notes(study, low, high),
         *_line_notes(study),
+        *_safe_notes(study, low, high),
         "effects of single switches depend on which others are on: first, last and in order are "
         "all right, each for its question",
     )
@@ -128,20 +147,45 @@ def _outcome_notes(study: EscapeStudy) -> tuple[str, ...]:
 
 
 def _check_notes(study: EscapeStudy, low: float, high: float) -> tuple[str, ...]:
-    """Without any switch the reference is Sobolev's treatment: what numerics make of that."""
-    name, base = "Sobolev", study.switches.base
-    if name not in study.variants.name or study.variants.name[base] == name:
+    """Without any switch a field is Sobolev's treatment: what numerics make of that."""
+    names, base = study.variants.name, study.switches.base
+    of_base = study.variants.chosen(base)
+    if of_base["hydrogen"] != "transfer":
+        return ()
+    plain = {k: v for k, v in of_base.items() if k != "transfer"} | {"hydrogen": "sobolev"}
+    same = [k for k in study.treatments.tolist() if study.variants.chosen(k) == plain]
+    if not same:
         return ()
     inside = outputs_between(study.redshift, 1.0, low, high)
     x_e = study.variants.free_electron_fraction[:, inside]
-    miss = float(np.max(np.abs(x_e[base] / x_e[study.variants.name.index(name)] - 1.0)))
+    miss = float(np.max(np.abs(x_e[base] / x_e[same[0]] - 1.0)))
     return (
-        f"check: {study.variants.name[base]} and {name}, the same physics, differ by at most "
+        f"check: {names[base]} and {names[same[0]]}, the same physics, differ by at most "
         f"{percent(miss)} in x_e there",
     )
 
 
+def _safe_notes(study: EscapeStudy, low: float, high: float) -> tuple[str, ...]:
+    """Where each treatment is good enough."""
+    within = WITHIN if study.question is None else study.question.within
+    said = []
+    for k in study.treatments.tolist():
+        ranges = safe_ranges(study, k, within, low, high)
+        places = ", ".join(f"z = {first:.0f} to {last:.0f}" for first, last in ranges)
+        said.append(
+            f"safe to {percent(within)} in x_e: {study.variants.name[k]} at {places or 'no z'}"
+        )
+    return tuple(said)
+
+
 def _line_notes(study: EscapeStudy) -> tuple[str, ...]:
+    if study.species == "He I":
+        if study.redshift[0] > 2900.0:
+            return ()
+        return (
+            f"outputs start at z = {study.redshift[0]:.0f}: He I leaves equilibrium near z = 2900, "
+            "and effects above the first output are not shown; raise grid.redshift_start",
+        )
     if study.setup.lines.lyman_lines != 1:
         return ()
     return (

@@ -3,15 +3,12 @@
 from __future__ import annotations
 
 import dataclasses
-from collections.abc import Iterable
+from collections.abc import Callable, Iterable
 from typing import Literal, NamedTuple
 
 from ..errors import InputError
 from ..escape.lines import Lines, Transfer
 from ..history.setup import Setup
-
-STIMULATED = ", 2s decay stimulated"
-"""How the name of a treatment ends whose 2s-1s decay the blackbody stimulates."""
 
 SWITCHES = {
     "stimulated": "2s-1s decay stimulated by the blackbody",
@@ -36,10 +33,31 @@ _WITHOUT_STIMULATION = "open"
 
 
 class Variant(NamedTuple):
-    """One of the setups that are compared: it differs from the others in its lines only."""
+    """One of the setups that are compared: it differs from the others in its lines only.
+
+    Attributes
+    ----------
+    name : str
+        What it is called.
+    lines : Lines
+        Its lines.
+    intercombination_rate_per_s : float or None, s^-1
+        Rate of 2 3P1 -> 1 1S; None: that of the setup.
+    """
 
     name: str
     lines: Lines
+    intercombination_rate_per_s: float | None = None
+
+
+class Ways(NamedTuple):
+    """Positions of variants by the ways to ask for a switch, as in :class:`Plan`."""
+
+    base: int
+    reference: int
+    alone: tuple[int, ...]
+    removed: tuple[int, ...]
+    cumulative: tuple[int, ...]
 
 
 class Plan(NamedTuple):
@@ -75,6 +93,11 @@ class Plan(NamedTuple):
     cumulative: tuple[int, ...]
     coarser: Variant | None = None
 
+    @property
+    def species(self) -> str:
+        """Whose lines the variants differ in: "H I" or "He I"."""
+        return "H I" if self.variants[0].intercombination_rate_per_s is None else "He I"
+
 
 def escape_plan(setup: Setup, order: Iterable[str] | None = None) -> Plan:
     """Plan a study of a setup.
@@ -93,42 +116,55 @@ def escape_plan(setup: Setup, order: Iterable[str] | None = None) -> Plan:
     InputError
         If the order lacks a switch, has an unknown one, or puts one before what it needs.
     """
-    switches = tuple(SWITCHES) if order is None else _checked(tuple(order))
+    switches = checked_order(order, SWITCHES, _NEEDS)
     found = [Variant(name, lines) for name, lines in _without_field(setup.lines)]
     treatments = tuple(range(len(found)))
     places: dict[frozenset[str], int] = {}
 
-    def having(chosen: Iterable[str], name: str) -> int:
-        on = frozenset(chosen)
+    def having(on: frozenset[str], name: str) -> int:
         if on not in places:
             places[on] = len(found)
-            found.append(Variant(name, transfer_lines(setup.lines, on)))
+            found.append(Variant(f"transfer {name}", transfer_lines(setup.lines, on)))
         return places[on]
 
-    base = having((), "transfer without switches")
-    reference = having(switches, "transfer with every switch")
-    alone = tuple(having(_with_needs(one), _alone_name(one)) for one in switches)
-    removed = tuple(
-        having(set(switches) - _with_needing(one), f"transfer without {one}") for one in switches
-    )
-    cumulative = tuple(
-        having(switches[:count], f"transfer with the first {count} switches")
-        for count in range(1, len(switches) + 1)
-    )
-    whole = found[reference]
+    asked = ways(switches, _NEEDS, having)
+    whole = found[asked.reference]
     coarser = Variant(f"{whole.name}, cells twice as wide", _coarser(variant_setup(setup, whole)))
-    return Plan(
-        tuple(found),
-        (*(frozenset[str]() for _ in treatments), *places),
-        treatments,
-        base,
-        reference,
-        switches,
-        alone,
-        removed,
-        cumulative,
-        coarser,
-    )
+    switched_on = (*(frozenset[str]() for _ in treatments), *places)
+    return Plan(tuple(found), switched_on, treatments, *asked[:2], switches, *asked[2:], coarser)
+
+
+def ways(
+    switches: tuple[str, ...], needs: dict[str, str], having: Callable[[frozenset[str], str], int]
+) -> Ways:
+    """Ask for every variant that the switches need, first, last and in order.
+
+    Parameters
+    ----------
+    switches : tuple of str
+        In the order in which they are added.
+    needs : dict of str to str
+        What a switch cannot be without.
+    having : callable
+        ``having(on, name)`` gives the position of the variant with these switches on.
+    """
+    every = frozenset(switches)
+    base, reference = having(frozenset(), "without switches"), having(every, "with every switch")
+    alone = []
+    for one in switches:
+        on = _with_needs(one, needs)
+        name = ", ".join(name for name in switches if name in on)
+        alone.append(having(on, f"with {name}" + (" alone" if len(on) == 1 else "")))
+    removed = [
+        having(every - {other for other in switches if one in _with_needs(other, needs)},
+               f"without {one}")
+        for one in switches
+    ]  # fmt: skip
+    cumulative = [
+        having(frozenset(switches[:count]), f"with the first {count} switches")
+        for count in range(1, len(switches) + 1)
+    ]
+    return Ways(base, reference, tuple(alone), tuple(removed), tuple(cumulative))
 
 
 def transfer_lines(lines: Lines, chosen: frozenset[str]) -> Lines:
@@ -153,8 +189,11 @@ def transfer_lines(lines: Lines, chosen: frozenset[str]) -> Lines:
 
 def variant_setup(setup: Setup, one: Variant) -> Setup:
     """The setup with the lines of a variant; InputError, with its name, where they do not fit."""
+    rate, helium = one.intercombination_rate_per_s, setup.helium
+    if rate is not None:
+        helium = dataclasses.replace(helium, intercombination_rate_per_s=rate)
     try:
-        return dataclasses.replace(setup, lines=one.lines)
+        return dataclasses.replace(setup, lines=one.lines, helium=helium)
     except InputError as error:
         raise InputError(f"{one.name}: {error}") from None
 
@@ -168,37 +207,47 @@ def _coarser(setup: Setup) -> Lines:
 def _without_field(lines: Lines) -> list[tuple[str, Lines]]:
     found = []
     for name, one in _TREATMENTS.items():
-        plain = dataclasses.replace(one, lyman_lines=lines.lyman_lines)
+        plain = dataclasses.replace(
+            lines, hydrogen=one.hydrogen, two_photon="spontaneous", transfer=None
+        )
         found.append((name, plain))
         if name != _WITHOUT_STIMULATION:
-            found.append((name + STIMULATED, dataclasses.replace(plain, two_photon="stimulated")))
+            stimulated = dataclasses.replace(plain, two_photon="stimulated")
+            found.append((f"{name}, 2s decay stimulated", stimulated))
     return found
 
 
-def _checked(order: tuple[str, ...]) -> tuple[str, ...]:
-    known = ", ".join(SWITCHES)
-    text = ", ".join(order)
-    unknown = [name for name in order if name not in SWITCHES]
+def checked_order(
+    order: Iterable[str] | None, switches: Iterable[str], needs: dict[str, str]
+) -> tuple[str, ...]:
+    """The order in which switches are added; InputError where it is none.
+
+    Parameters
+    ----------
+    order : iterable of str or None
+        None: that of `switches`.
+    switches : iterable of str
+        Each of them.
+    needs : dict of str to str
+        What a switch cannot be without.
+    """
+    every = tuple(switches)
+    given = every if order is None else tuple(order)
+    known, text = ", ".join(every), ", ".join(given)
+    unknown = [name for name in given if name not in every]
     if unknown:
         raise InputError(f'order: "{unknown[0]}" is no switch; they are {known}')
-    if sorted(order) != sorted(SWITCHES):
+    if sorted(given) != sorted(every):
         raise InputError(f"order = {text}: each switch once is needed: {known}")
-    for name, needed in _NEEDS.items():
-        if order.index(name) < order.index(needed):
+    for name, needed in needs.items():
+        if given.index(name) < given.index(needed):
             raise InputError(f"order = {text}: {name} comes with {needed}, so after it")
-    return order
+    return given
 
 
-def _alone_name(switch: str) -> str:
-    needed = _NEEDS.get(switch)
-    return (
-        f"transfer with {switch} alone" if needed is None else f"transfer with {needed}, {switch}"
-    )
-
-
-def _with_needs(switch: str) -> set[str]:
-    return {switch, _NEEDS.get(switch, switch)}
-
-
-def _with_needing(switch: str) -> set[str]:
-    return {switch, *(name for name, needed in _NEEDS.items() if needed == switch)}
+def _with_needs(switch: str, needs: dict[str, str]) -> frozenset[str]:
+    """A switch, what it needs, and what that needs."""
+    found = [switch]
+    while found[-1] in needs:
+        found.append(needs[found[-1]])
+    return frozenset(found)

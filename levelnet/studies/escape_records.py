@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
+import tomllib
 from dataclasses import dataclass
+from typing import Any
 
 from ..arrays import FloatArray, IntArray, frozen_array
 from ..errors import Outcome
@@ -21,6 +23,8 @@ class Variants:
         What each is called.
     lines : tuple of str, length n_variants
         Its table [lines] as TOML.
+    intercombination_rate_per_s : ndarray, shape (n_variants,), s^-1
+        Rate of 2 3P1 -> 1 1S of He I; NaN where helium is inert.
     outcome : tuple of str, length n_variants
         Name of the Outcome of each.
     switched_on : ndarray of int, shape (n_variants, n_switches)
@@ -37,6 +41,7 @@ class Variants:
 
     name: tuple[str, ...]
     lines: tuple[str, ...]
+    intercombination_rate_per_s: FloatArray
     outcome: tuple[str, ...]
     switched_on: IntArray
     free_electron_fraction: FloatArray
@@ -49,12 +54,17 @@ class Variants:
         count = len(self.name)
         frozen_array(self, "switched_on", (count, *self.switched_on.shape[1:]), int)
         for name in (
+            "intercombination_rate_per_s",
             "free_electron_fraction",
             "matter_temperature_k",
             "observable",
             "cumulative_share",
         ):
             frozen_array(self, name, (count, *getattr(self, name).shape[1:]))
+
+    def chosen(self, variant: int) -> dict[str, Any]:
+        """Table [lines] of a variant by its position."""
+        return tomllib.loads(self.lines[variant])
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -111,7 +121,7 @@ class NumericalError:
 
 @dataclass(frozen=True, slots=True, eq=False)
 class EscapeStudy:
-    """How far each treatment of the line photons is from the field resolved in frequency.
+    """How far each treatment of the line photons is from the one with all physics that is known.
 
     Attributes
     ----------
@@ -139,6 +149,8 @@ class EscapeStudy:
         The field of the reference, if it resolves one.
     question : Question or None
         What the study was asked, if it was.
+    helium : EscapeStudy or None
+        The same of the lines of He I on the same grid, where helium recombines.
     """
 
     setup: Setup
@@ -154,6 +166,7 @@ class EscapeStudy:
     channels: Channels
     field: RadiationField | None = None
     question: Question | None = None
+    helium: EscapeStudy | None = None
 
     def __post_init__(self) -> None:
         """Check shapes and make every array read-only."""
@@ -167,6 +180,13 @@ class EscapeStudy:
             raise ValueError(f"positions of variants must be 0 to {n_variants - 1}")
         if self.variants.free_electron_fraction.shape[1] != count:
             raise ValueError(f"variants: {count} redshifts are needed")
+
+    @property
+    def species(self) -> str:
+        """Whose lines the variants differ in: "H I" or "He I"."""
+        chosen = [self.variants.chosen(k) for k in range(len(self.variants.name))]
+        count = {name: len({one.get(name) for one in chosen}) for name in ("hydrogen", "helium")}
+        return "He I" if count["helium"] > 1 and count["hydrogen"] == 1 else "H I"
 
     @property
     def notes(self) -> tuple[str, ...]:

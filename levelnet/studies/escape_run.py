@@ -9,6 +9,7 @@ import numpy as np
 from ..arrays import FloatArray
 from ..errors import Outcome, SolveError
 from ..history.course import state_at
+from ..history.helium_outputs import helium_channels
 from ..history.outcome import outcome_of, relaxation_hubble
 from ..history.outputs import channels
 from ..history.result import Channels, RadiationField
@@ -32,12 +33,15 @@ class Job(NamedTuple):
         Levels kept from elimination beside those of its lines.
     with_field : bool
         Whether its field is given back.
+    species : str
+        "H I" or "He I": whose channels to the ground state are given back.
     """
 
     name: str
     setup: Setup
     keeps: tuple[tuple[int, int], ...]
     with_field: bool
+    species: str = "H I"
 
 
 class VariantResult(NamedTuple):
@@ -106,7 +110,9 @@ def compute_variant(
             seen.names,
             seen.units,
             seen.value,
-            channels(integrated, steps_of(integrated), redshift, flows),
+            helium_channels(integrated, redshift)
+            if job.species == "He I"
+            else channels(integrated, steps_of(integrated), redshift, flows),
             integrated.field.field if integrated.field and job.with_field else None,
             outcome_of(setup, integrated, map(relaxation_hubble, here)),
         )

@@ -137,6 +137,33 @@ def largest_difference(study: EscapeStudy, variant: int, low: float, high: float
     return Largest(float(values[worst]), float(study.redshift[inside][worst]))
 
 
+def safe_ranges(
+    study: EscapeStudy, variant: int, within: float, low: float, high: float
+) -> tuple[tuple[float, float], ...]:
+    """Between which outputs a variant gives x_e to an accuracy, each as (highest, lowest).
+
+    Parameters
+    ----------
+    study : EscapeStudy
+        Any.
+    variant : int
+        Its position.
+    within : float, above 1e-8 to 1 (dimensionless)
+        Relative error allowed in x_e, the numerical error of the reference counted.
+    low, high : float, dimensionless
+        Redshifts, ends included.
+    """
+    inside = outputs_between(study.redshift, within, low, high)
+    own = study.reference_error.free_electron_fraction
+    good = (np.abs(differences(study)[variant]) + own)[inside] <= within
+    z = study.redshift[inside]
+    edges = np.flatnonzero(np.diff(np.concatenate([[False], good, [False]]).astype(int)))
+    return tuple(
+        (float(z[first]), float(z[last - 1]))
+        for first, last in zip(edges[::2].tolist(), edges[1::2].tolist(), strict=True)
+    )
+
+
 def candidates_of(study: EscapeStudy) -> tuple[int, ...]:
     """Positions of the variants that a user would choose, from the simplest on."""
     counts = study.variants.switched_on.sum(axis=1).tolist()
@@ -257,14 +284,14 @@ def worse_than_absent(study: EscapeStudy, low: float, high: float) -> tuple[Wors
 
     Judged by the largest difference of x_e between two redshifts (dimensionless).
     """
-    from .escape_plan import STIMULATED
-
     names, base = study.variants.name, study.switches.base
     pairs = [(k, base) for k in study.switches.alone.tolist()]
-    for k in study.treatments.tolist():
-        plain = names[k].removesuffix(STIMULATED)
-        if plain != names[k] and plain in names:
-            pairs.append((k, names.index(plain)))
+    treatments = study.treatments.tolist()
+    chosen = {k: study.variants.chosen(k) for k in treatments}
+    for k in treatments:
+        if chosen[k]["two_photon"] == "stimulated":
+            plain = {**chosen[k], "two_photon": "spontaneous"}
+            pairs += [(k, other) for other in treatments if chosen[other] == plain]
     found = []
     for with_it, without in dict.fromkeys(pairs):
         error, less = (

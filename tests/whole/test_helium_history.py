@@ -105,7 +105,7 @@ def test_intercombination_line() -> None:
     k = at(usual, 1800.0)
     assert off.free_electron_fraction[k] / usual.free_electron_fraction[k] - 1.0 > 5e-3
     assert off.helium is not None
-    assert "2 3P1-1 1S" not in off.helium.lines
+    assert "2 3P1-1 1S" not in off.helium.lines.names
 
 
 def test_higher_lines_add_escape() -> None:
@@ -113,7 +113,7 @@ def test_higher_lines_add_escape() -> None:
     k = at(closed, 2200.0)
     assert free.free_electron_fraction[k] < closed.free_electron_fraction[k]
     assert free.helium is not None
-    assert "5 1P-1 1S" in free.helium.lines
+    assert "5 1P-1 1S" in free.helium.lines.names
 
 
 def test_charge_and_nuclei() -> None:
