@@ -4,13 +4,23 @@ from __future__ import annotations
 
 import operator
 from collections.abc import Iterable
+from typing import TYPE_CHECKING
 
+from .. import constants as const
+from ..atomic.physics import Physics
+from ..background.cosmology import Cosmology
 from ..errors import InputError
 from ..escape.lines import Lines
 from ..escape.treatment import SobolevFeedback
 from ..history.atom import open_lyman_lines
 from ..history.setup import Setup
 from ..network.reduced import KeptLevels
+
+if TYPE_CHECKING:
+    from .table import EffectiveTable
+
+HELIUM_FRACTIONS = 0.1, 0.4
+"""Helium by mass in the two far cosmologies of a certificate."""
 
 KeptChoice = tuple[tuple[int, int], ...]
 
@@ -87,6 +97,39 @@ def check_lines(lines: Lines) -> None:
             'lines above; allowed are "closed", "open", "sobolev" and, more slowly, "transfer"; '
             "levelnet solve has it"
         )
+
+
+def recombines(table: EffectiveTable, cosmology: Cosmology) -> bool:
+    """Whether helium recombines too: the table has its levels, and there is some."""
+    return table.helium is not None and cosmology.helium_ratio() > 0.0
+
+
+def check_helium(table: EffectiveTable, cosmology: Cosmology, physics: Physics) -> None:
+    """Refuse what a table with levels of helium does not hold, or its certificate not cover."""
+    if not recombines(table, cosmology):
+        return
+    if physics != Physics():
+        raise InputError(
+            "fine_structure_change, electron_mass_change: not known for levels of helium; the table "
+            "holds them"
+        )
+    if table.setup.lines.transfer is not None:
+        raise InputError(
+            'lines.hydrogen = "transfer": not with a table that holds levels of helium; levelnet '
+            "solve has both"
+        )
+    own, asked = (_mass_fraction(one) for one in (table.setup.cosmology, cosmology))
+    low, high = min(own, HELIUM_FRACTIONS[0]), max(own, HELIUM_FRACTIONS[1])
+    if not low * (1.0 - 1e-12) <= asked <= high * (1.0 + 1e-12):
+        raise InputError(
+            f"helium_mass_fraction = {asked:g}: the histories of this table were checked from "
+            f"{low:g} to {high:g}; allowed are these and 0"
+        )
+
+
+def _mass_fraction(cosmology: Cosmology) -> float:
+    mass = const.HELIUM_HYDROGEN_MASS_RATIO * cosmology.helium_ratio()
+    return mass / (1.0 + mass)
 
 
 def check_without_field(lines: Lines) -> None:

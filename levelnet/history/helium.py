@@ -40,9 +40,9 @@ COLDEST_K = 1400.0
 
 # Pull to Saha equilibrium in Hubble rates, and ln of x_HeIII/x_HeII between which it takes over
 # from the levels of He II, which would only ask for short steps.
-_PULL, _GONE, _FADING = 1e9, -50.0, -40.0
+PULL, GONE, FADING = 1e9, -50.0, -40.0
 # From so far above COLDEST_K, in ln T_r, rates fade to nothing.
-_EBB = 0.05
+EBB = 0.05
 ION_WEIGHT = 2.0  # of He+ in its ground state
 
 
@@ -286,7 +286,7 @@ class HeliumEquations:
     def rates(self, around: Around, state: FloatArray) -> Rates:
         """Rates of change and derivatives at (a, b)."""
         x = self.fractions(state)
-        full, slope = _ramp(math.log(around.radiation_temperature_k / COLDEST_K) / _EBB)
+        full, slope = _ramp(math.log(around.radiation_temperature_k / COLDEST_K) / EBB)
         if full == 0.0:
             return _stacked([0.0] * 7, [0.0] * 7)
         first = self.first.flow(around, x.single, x.neutral, self._seen(around))
@@ -296,13 +296,13 @@ class HeliumEquations:
         if full == 1.0:
             return found
         fading = Rates(*(full * part for part in found))
-        return fading._replace(by_time=fading.by_time - slope / _EBB * found.rate)
+        return fading._replace(by_time=fading.by_time - slope / EBB * found.rate)
 
     def _upper_rates(
         self, around: Around, x: HeliumFractions, b: float, first: Flow
     ) -> list[float]:
         """Rate of b and its derivatives: by the levels of He II, or by Saha equilibrium."""
-        part, slope = _ramp((b - _GONE) / (_FADING - _GONE))
+        part, slope = _ramp((b - GONE) / (FADING - GONE))
         if self.second is None or part == 0.0:
             return self._saha_rates(around, b)
         levels = _second_rates(around, x, first, self.second.flow(around, x.double, x.single))
@@ -310,7 +310,7 @@ class HeliumEquations:
             return levels
         pulled = self._saha_rates(around, b)
         mixed = [part * n + (1.0 - part) * p for n, p in zip(levels, pulled, strict=True)]
-        mixed[2] += slope / (_FADING - _GONE) * (levels[0] - pulled[0])
+        mixed[2] += slope / (FADING - GONE) * (levels[0] - pulled[0])
         return mixed
 
     def _seen(self, around: Around) -> Seen:
@@ -379,7 +379,7 @@ class HeliumEquations:
         pulled = self.saha_log_ratio(1, around) - b
         # Value, by a, by b, by ln n_e, by v, by ln a (T falls, n_e falls as a^-3).
         terms = (pulled, 0.0, -1.0, -1.0, -slope, slope + 3.0, 0.0)
-        return [_PULL * one for one in terms]
+        return [PULL * one for one in terms]
 
     def saha_log_ratio(self, stage: int, around: Around) -> float:
         """Ln of an ion over the stage below it (0: He II/He I) in Saha equilibrium at T_m."""

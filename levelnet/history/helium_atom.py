@@ -86,7 +86,13 @@ def _higher(setup: Setup) -> HigherLines:
     return setup.lines.helium_higher_lines or "closed"
 
 
-def build_helium(setup: Setup, hottest_k: float, tell: Tell, pieces: Pieces | None) -> HeliumAtoms:
+def build_helium(
+    setup: Setup,
+    hottest_k: float,
+    tell: Tell,
+    pieces: Pieces | None,
+    tolerance: float | None = None,
+) -> HeliumAtoms:
     """Helium of a setup, reduced from COLDEST_K up to `hottest_k`.
 
     Parameters
@@ -99,10 +105,12 @@ def build_helium(setup: Setup, hottest_k: float, tell: Tell, pieces: Pieces | No
         Progress.
     pieces : Pieces or None
         Store of reductions.
+    tolerance : float, optional
+        Largest error in the ln of any rate; None: what the setup's accuracy asks for.
     """
     treatment = helium_treatment(setup)
     top_k = max(_HOTTEST_K, 2.0 ** (math.ceil(4.0 * math.log2(hottest_k)) / 4.0))
-    tolerance = table_tolerance(setup)
+    tolerance = tolerance or table_tolerance(setup)
     tell("helium", 0.0)
     ladders = helium_ladders(setup.helium.n_max, kept_terms(setup.helium.n_max, _higher(setup)))
     reduced = _table_of_first(ladders, top_k, tolerance, pieces)

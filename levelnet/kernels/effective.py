@@ -21,7 +21,9 @@ LOG_CAPTURE, SLOPE_RADIATION, SLOPE_MATTER, LOG_PHOTO, SLOPE_PHOTO = 0, 1, 2, 3,
 CAPTURE, LIFT, PHOTO, LOSS, LOSS_COLUMN, LOSS_TEMPERATURE = 5, 6, 7, 8, 9, 10
 LOSS_STRUCTURE, LOSS_MASS, SOURCE, DEPARTURE = 11, 12, 13, 14
 FATE, IONIZED, LOSS_FOLDED, PHOTO_FOLDED, EXIT = 15, 16, 17, 18, 19
-N_VECTORS = 20
+# What a level takes from the ground state beyond equilibrium; not 0 in lines of helium alone.
+EXCESS = 20
+N_VECTORS = 21
 
 # Elements of `Room.slope`: derivatives of the net flow by the logarithm named; ln of the scale
 # factor on each recombination (with its inverse), each exchange and the two-photon rate follow.
@@ -127,7 +129,7 @@ class Universe(NamedTuple):
 
 
 class Room(NamedTuple):
-    """Working arrays: vector (20, n_kept), matrix (3, n_kept, n_kept), slope, linear (2, 3)."""
+    """Working arrays: vector (21, n_kept), matrix (3, n_kept, n_kept), slope, linear (2, 3)."""
 
     vector: FloatArray
     matrix: FloatArray
@@ -199,7 +201,7 @@ def _cell(x: float, low: float, high: float, count: int) -> tuple[int, float, fl
 
 
 @kernel
-def _read_table(atom: Atom, x: float, inverse: float, y: float, room: Room, slopes: bool) -> None:
+def read_table(atom: Atom, x: float, inverse: float, y: float, room: Room, slopes: bool) -> None:
     """Rates and slopes at ln T' = x, 1/T' = inverse and ln(T_m/T_r) = y into `room`."""
     vector, matrix = room.vector, room.matrix
     n_kept = vector.shape[1]
@@ -333,11 +335,18 @@ def net_flow(
     """
     x = math.log(radiation_k) - atom.constants[1]
     inverse = math.exp(atom.constants[1]) / radiation_k
-    _read_table(atom, x, inverse, ratio, room, slopes)
+    read_table(atom, x, inverse, ratio, room, slopes)
     _couple(atom, x, inverse, density * ground / hubble, room)
+    return solve_kept(atom, inverse, density * electrons * ions, ground, room, slopes)
+
+
+@kernel
+def solve_kept(
+    atom: Atom, inverse: float, pairs: float, ground: float, room: Room, slopes: bool
+) -> float:
+    """Net flow from the rates and losses in `room`; pairs = n_e n_ion over the nuclei, cm^-3."""
     _eliminate(room)
     vector = room.vector
-    pairs = density * electrons * ions
     log_ratio = math.log(ground / pairs)
     flow = 0.0
     for i in range(vector.shape[1]):
@@ -347,20 +356,20 @@ def net_flow(
         vector[CAPTURE, i] = capture
         vector[LIFT, i] = capture * (1.0 + excess)
         vector[SOURCE, i] = -capture * excess
-        flow += vector[FATE, i] * vector[SOURCE, i]
+        flow += vector[FATE, i] * vector[SOURCE, i] - vector[IONIZED, i] * vector[EXCESS, i]
     if slopes:
-        _depart(room)
+        depart(room)
         _differentiate(atom, inverse, room)
     return flow
 
 
 @kernel
-def _depart(room: Room) -> None:
+def depart(room: Room) -> None:
     """Departures of the kept levels from Boltzmann equilibrium with the ground state."""
     vector, folded = room.vector, room.matrix[2]
     n = vector.shape[1]
     for i in range(n):
-        vector[DEPARTURE, i] = vector[SOURCE, i]
+        vector[DEPARTURE, i] = vector[SOURCE, i] + vector[EXCESS, i]
     for m in range(n - 1, 0, -1):
         share = vector[DEPARTURE, m] / vector[EXIT, m]
         for i in range(m):
@@ -423,7 +432,7 @@ def _differentiate(atom: Atom, inverse: float, room: Room) -> None:
 
 
 @kernel
-def _fractions(odds: float) -> tuple[float, float]:
+def split_odds(odds: float) -> tuple[float, float]:
     """Ionized and neutral fraction from u, each to full precision."""
     small = math.exp(-abs(odds))
     if odds > 0.0:
@@ -432,7 +441,7 @@ def _fractions(odds: float) -> tuple[float, float]:
 
 
 @kernel
-def _log_hubble(universe: Universe, s: float) -> tuple[float, float]:
+def hubble_at(universe: Universe, s: float) -> tuple[float, float]:
     """Interpolate ln H and its slope by s: cubic Hermite."""
     nodes = universe.log_hubble
     step = universe.today[4]
@@ -452,8 +461,8 @@ def rate_of_slow(
     atom: Atom, universe: Universe, s: float, u: float, v: float, room: Room
 ) -> tuple[float, float]:
     """(du/ds, dv/ds) of u = ln(x_HII/x_HI) and v = ln(T_m/T_r) at s = ln a."""
-    ions, ground = _fractions(u)
-    log_hubble, _ = _log_hubble(universe, s)
+    ions, ground = split_odds(u)
+    log_hubble, _ = hubble_at(universe, s)
     hubble = math.exp(log_hubble)
     growth = math.exp(-s)
     radiation_k = universe.today[5] * growth
@@ -469,8 +478,8 @@ def linearize(
     atom: Atom, universe: Universe, s: float, u: float, v: float, room: Room, push: FloatArray
 ) -> tuple[float, float]:
     """(du/ds, dv/ds); derivatives by u, v, s into ``room.linear``, by parameters into `push`."""
-    ions, ground = _fractions(u)
-    log_hubble, hubble_slope = _log_hubble(universe, s)
+    ions, ground = split_odds(u)
+    log_hubble, hubble_slope = hubble_at(universe, s)
     hubble = math.exp(log_hubble)
     growth = math.exp(-s)
     radiation_k = universe.today[5] * growth
@@ -738,7 +747,7 @@ def _newton_at(
 
 
 @kernel
-def _solve_many(matrix: FloatArray, right: FloatArray) -> None:
+def solve_many(matrix: FloatArray, right: FloatArray) -> None:
     """Gaussian elimination with row pivoting, in place; `right` has a column per system."""
     n, columns = matrix.shape[0], right.shape[1]
     for k in range(n):
@@ -806,14 +815,14 @@ def _sensitivities(
                         matrix[2 * i + a, 2 * j + b] = same - weight * room.linear[a, b]
                     for p in range(n_parameters):
                         right[2 * i + a, p] += weight * push[a, p]
-        _solve_many(matrix, right)
+        solve_many(matrix, right)
         for p in range(n_parameters):
             found[k + 1, p] = right[4, p]
             found[k + 1, n_parameters + p] = right[5, p]
 
 
 @kernel
-def _interpolate(
+def interpolate(
     times: FloatArray, values: FloatArray, outputs: FloatArray, skip: int, out: FloatArray
 ) -> None:
     """Values at ascending outputs from number `skip` on, by local polynomials of degree 5."""
@@ -900,15 +909,15 @@ def effective_history(
     if status != DONE or count == 1:
         return status
     times, points = times[:count], points[:count]
-    _interpolate(times, points, outputs, above, states)
-    _interpolate(times, points, grid, grid_above, grid_states)
+    interpolate(times, points, outputs, above, states)
+    interpolate(times, points, grid, grid_above, grid_states)
     if n_parameters > 0:
         found = np.empty((count, 2 * n_parameters))
         for p in range(n_parameters):
             found[0, p], found[0, n_parameters + p] = push[0, p], push[1, p]
         _sensitivities(atom, universe, times, points, found, room)
-        _interpolate(times, found, outputs, above, slopes)
-        _interpolate(times, found, grid, grid_above, grid_slopes)
+        interpolate(times, found, outputs, above, slopes)
+        interpolate(times, found, grid, grid_above, grid_slopes)
     return status
 
 
