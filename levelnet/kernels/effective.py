@@ -30,6 +30,9 @@ N_VECTORS = 21
 BY_RADIATION, BY_MATTER, BY_DENSITY, BY_HUBBLE, BY_ELECTRONS, BY_IONIZED, BY_GROUND = range(7)
 BY_STRUCTURE, BY_MASS, BY_SCALES = 7, 8, 9
 
+# ln of the slowest rate in s^-1 that is told from 0.
+_SLOWEST = -300.0
+
 # Columns of `Universe.drive`.
 DRIVE_TEMPERATURE, DRIVE_DENSITY, DRIVE_HELIUM, DRIVE_STRUCTURE, DRIVE_MASS = 0, 1, 2, 3, 4
 DRIVE_COMPTON, DRIVE_SCALE, N_DRIVES = 5, 6, 7
@@ -201,6 +204,12 @@ def _cell(x: float, low: float, high: float, count: int) -> tuple[int, float, fl
 
 
 @kernel
+def _rate(log_rate: float) -> float:
+    """Rate from its ln; 0 long before products of rates are so small that arithmetic is slow."""
+    return math.exp(log_rate) if log_rate > _SLOWEST else 0.0
+
+
+@kernel
 def read_table(atom: Atom, x: float, inverse: float, y: float, room: Room, slopes: bool) -> None:
     """Rates and slopes at ln T' = x, 1/T' = inverse and ln(T_m/T_r) = y into `room`."""
     vector, matrix = room.vector, room.matrix
@@ -222,7 +231,7 @@ def read_table(atom: Atom, x: float, inverse: float, y: float, room: Room, slope
         base += atom.scale[i]
         vector[LOG_CAPTURE, i] = base + y * h + atom.constants[2]
         vector[LOG_PHOTO, i] = base - (atom.level[2, i] - 1.5 * x + reach) + atom.constants[3]
-        vector[PHOTO, i] = math.exp(vector[LOG_PHOTO, i])
+        vector[PHOTO, i] = _rate(vector[LOG_PHOTO, i])
         matrix[0, i, i] = matrix[1, i, i] = 0.0
     for k in range(atom.lower.shape[0]):
         i, j = atom.lower[k], atom.upper[k]
@@ -234,8 +243,8 @@ def read_table(atom: Atom, x: float, inverse: float, y: float, room: Room, slope
         else:
             down = _value(atom.exchange[cell, k], t)
         down += atom.scale[n_kept + k] + atom.constants[3] - barrier
-        matrix[0, j, i] = math.exp(down)
-        matrix[0, i, j] = math.exp(down + atom.pair[2, k] - rise)
+        matrix[0, j, i] = _rate(down)
+        matrix[0, i, j] = _rate(down + atom.pair[2, k] - rise)
 
 
 @kernel
