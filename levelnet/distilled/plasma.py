@@ -27,7 +27,7 @@ from .table import EffectiveTable
 from .universe import make_universe
 
 # Local errors allowed in a step over the error asked: of hydrogen's ionization and T_m, of helium.
-_LOCAL, _LOCAL_HELIUM = 2.0, 2.0
+_LOCAL, _LOCAL_HELIUM = 2.0, 10.0
 _FIRST_STEP, _MAX_STEPS = 1e-3, 20_000
 # T_r above which a start is not looked for, and below; at the first helium is doubly ionized in any
 # universe that the table admits.

@@ -40,6 +40,14 @@ def kernel(function: Function) -> Function:
         numba.config.CACHE_DIR = own
 
 
+def inlined(function: Function) -> Function:
+    """Make `function` part of every kernel that calls it, for small steps of many arguments.
+
+    A call hands every array over as seven numbers; that costs as much as a few hundred operations.
+    """
+    return cast(Function, numba.njit(inline="always", error_model="numpy")(function))
+
+
 def _compiled(function: Function, cache: bool) -> Function:
     compile_with = numba.njit(cache=cache, error_model="numpy", fastmath=False, nogil=True)
     return cast(Function, compile_with(function))

@@ -11,7 +11,7 @@ from typing import NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
-from .compile import kernel
+from .compile import inlined, kernel
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
@@ -151,7 +151,7 @@ def make_room(n_kept: int, n_pairs: int) -> Room:
     )
 
 
-@kernel
+@inlined
 def _patch(series: FloatArray, t: float) -> tuple[float, float]:
     """Value and derivative by t of a power series."""
     value, slope = series[-1], 0.0
@@ -161,7 +161,7 @@ def _patch(series: FloatArray, t: float) -> tuple[float, float]:
     return value, slope
 
 
-@kernel
+@inlined
 def _value(series: FloatArray, t: float) -> float:
     """Value of a power series."""
     value = float(series[-1])
@@ -170,7 +170,7 @@ def _value(series: FloatArray, t: float) -> float:
     return value
 
 
-@kernel
+@inlined
 def _value_two(series: FloatArray, t: float, w: float) -> float:
     """Value of a double power series in t (first index) and w."""
     value = 0.0
@@ -179,7 +179,7 @@ def _value_two(series: FloatArray, t: float, w: float) -> float:
     return value
 
 
-@kernel
+@inlined
 def _patch_two(series: FloatArray, t: float, w: float) -> tuple[float, float, float]:
     """Value and derivatives by t (first index) and w of a double power series."""
     value = by_t = by_w = 0.0
@@ -194,7 +194,7 @@ def _patch_two(series: FloatArray, t: float, w: float) -> tuple[float, float, fl
     return value, by_t, by_w
 
 
-@kernel
+@inlined
 def _cell(x: float, low: float, high: float, count: int) -> tuple[int, float, float]:
     """Cell of x, place in it on [-1, 1], and d place/d x."""
     per = count / (high - low)
@@ -203,13 +203,13 @@ def _cell(x: float, low: float, high: float, count: int) -> tuple[int, float, fl
     return cell, 2.0 * (at - cell) - 1.0, 2.0 * per
 
 
-@kernel
+@inlined
 def _rate(log_rate: float) -> float:
     """Rate from its ln; 0 long before products of rates are so small that arithmetic is slow."""
     return math.exp(log_rate) if log_rate > _SLOWEST else 0.0
 
 
-@kernel
+@inlined
 def read_table(atom: Atom, x: float, inverse: float, y: float, room: Room, slopes: bool) -> None:
     """Rates and slopes at ln T' = x, 1/T' = inverse and ln(T_m/T_r) = y into `room`."""
     vector, matrix = room.vector, room.matrix
@@ -247,7 +247,7 @@ def read_table(atom: Atom, x: float, inverse: float, y: float, room: Room, slope
         matrix[0, i, j] = _rate(down + atom.pair[2, k] - rise)
 
 
-@kernel
+@inlined
 def _couple(atom: Atom, x: float, inverse: float, column: float, room: Room) -> None:
     """Loss of each kept level to the ground state; column = n_1s/H in s/cm^3."""
     vector = room.vector
@@ -289,7 +289,7 @@ def _couple(atom: Atom, x: float, inverse: float, column: float, room: Room) -> 
     room.slope[-1] = rate
 
 
-@kernel
+@inlined
 def _eliminate(room: Room) -> None:
     """Fates of an atom in each kept level, by elimination without a single subtraction.
 
@@ -342,6 +342,25 @@ def net_flow(
     The arguments are T_r in K, ln(T_m/T_r), n_H in cm^-3, H in s^-1, and n_e, n_HII and n_1s over
     n_H.
     """
+    return stage_flow(
+        atom, radiation_k, ratio, density, hubble, electrons, ions, ground, room, slopes
+    )
+
+
+@inlined
+def stage_flow(
+    atom: Atom,
+    radiation_k: float,
+    ratio: float,
+    density: float,
+    hubble: float,
+    electrons: float,
+    ions: float,
+    ground: float,
+    room: Room,
+    slopes: bool,
+) -> float:
+    """As :func:`net_flow`, of any stage: nuclei, ions and ground states are those of its own."""
     x = math.log(radiation_k) - atom.constants[1]
     inverse = math.exp(atom.constants[1]) / radiation_k
     read_table(atom, x, inverse, ratio, room, slopes)
@@ -349,7 +368,7 @@ def net_flow(
     return solve_kept(atom, inverse, density * electrons * ions, ground, room, slopes)
 
 
-@kernel
+@inlined
 def solve_kept(
     atom: Atom, inverse: float, pairs: float, ground: float, room: Room, slopes: bool
 ) -> float:
@@ -372,7 +391,7 @@ def solve_kept(
     return flow
 
 
-@kernel
+@inlined
 def depart(room: Room) -> None:
     """Departures of the kept levels from Boltzmann equilibrium with the ground state."""
     vector, folded = room.vector, room.matrix[2]
@@ -390,7 +409,7 @@ def depart(room: Room) -> None:
         vector[DEPARTURE, m] = total / vector[EXIT, m]
 
 
-@kernel
+@inlined
 def _differentiate(atom: Atom, inverse: float, room: Room) -> None:
     """Derivatives of the net flow, as `flow_slopes` in levelnet/network/gradient.py, and more."""
     vector, rate, rate_slope, slope = room.vector, room.matrix[0], room.matrix[1], room.slope

@@ -11,7 +11,7 @@ from typing import NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
-from .compile import kernel
+from .compile import inlined, kernel
 from .effective import (
     BY_DENSITY,
     BY_ELECTRONS,
@@ -29,9 +29,9 @@ from .effective import (
     LOSS_TEMPERATURE,
     Atom,
     Room,
-    net_flow,
     read_table,
     solve_kept,
+    stage_flow,
 )
 
 FloatArray = NDArray[np.float64]
@@ -198,7 +198,7 @@ def _look_back(memory: Memory, time: float, knot: FloatArray) -> int:
     return first
 
 
-@kernel
+@inlined
 def _blue_side(
     lines: HeliumLines, k: int, place: Place, memory: Memory, knot: FloatArray
 ) -> tuple[float, float, float]:
@@ -241,7 +241,7 @@ def add_logs(a: float, b: float) -> float:
     return max(a, b) + math.log1p(math.exp(-abs(a - b)))
 
 
-@kernel
+@inlined
 def _sobolev(depth: float) -> tuple[float, float]:
     """Escape probability and d ln of it by ln depth."""
     if depth > 1e-8:
@@ -250,7 +250,7 @@ def _sobolev(depth: float) -> tuple[float, float]:
     return 1.0 - 0.5 * depth, -0.5 * depth
 
 
-@kernel
+@inlined
 def _couple(
     atom: Atom,
     lines: HeliumLines,
@@ -310,7 +310,7 @@ def _couple(
     vector[LOSS, lines.decay] += lines.decay_rate
 
 
-@kernel
+@inlined
 def _gather(
     flow: float, hubble_slope: float, room: Room, out: FloatArray
 ) -> None:
@@ -324,7 +324,7 @@ def _gather(
     out[BY_HYDROGEN] = 0.0
 
 
-@kernel
+@inlined
 def first_flow(
     atom: Atom,
     lines: HeliumLines,
@@ -357,12 +357,12 @@ def first_flow(
         out[BY_NEUTRAL] -= vector[IONIZED, i] * kept[EXCESS_GROUND, i]
 
 
-@kernel
+@inlined
 def second_flow(
     atom: Atom, place: Place, double: float, single: float, room: Room, slopes: bool, out: FloatArray
 ) -> None:
     """Net recombinations to He II per nucleus and second and, with `slopes`, their derivatives."""
-    flow = net_flow(
+    flow = stage_flow(
         atom,
         place.radiation_k,
         place.ratio,
