@@ -21,8 +21,8 @@ from ..network.tabulation import TabulatedReduction, node_count
 from ..numerics.chebyshev import ChebyshevSeries, chebyshev_nodes
 from ..pieces import Pieces
 from .certificate import certify as certify_table
-from .kept import check_lines, check_overrides, choose_kept
 from .helium_build import distill_helium
+from .kept import check_lines, check_no_field, check_overrides, choose_kept
 from .nodes import Atom, NodeSource, outline
 from .patches import Patches, Ranges, fit_patches
 from .plasma import HOTTEST_K
@@ -109,6 +109,7 @@ def distill(  # noqa: PLR0913  choices by name, each with a default
     tell = progress or (lambda stage, fraction: None)
     check_overrides(setup)
     check_lines(setup.lines)
+    check_no_field(setup)
     atom = Atom.of(setup.hydrogen, choice, setup.rates.network)
     tell("atomic data", 0.0)
     with threadpool_limits(limits=1, user_api="blas"):

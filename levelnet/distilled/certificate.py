@@ -303,9 +303,7 @@ def _full_history(
     """x_e at `redshift` from the full network; NaN above the hand-over and below the end."""
     equations = slow_equations(setup, reduced, helium=fresh_equations(helium))
     handover = handover_of(setup, equations) if helium else setup_handover(setup)
-    trajectory = integrate_slow(
-        setup, equations, handover, redshift, lambda stage, fraction: None
-    )
+    trajectory = integrate_slow(setup, equations, handover, redshift, lambda stage, fraction: None)
     time, wanted = trajectory.time, -np.log1p(redshift)
     nearest = np.argmin(np.abs(time[None, :] - wanted[:, None]), axis=1)
     electrons = [equations.electron_fraction(state) for state in trajectory.state[nearest]]

@@ -16,9 +16,8 @@ from ..history.helium import HeliumEquations
 from ..history.helium_atom import HeliumAtoms
 from ..network.assembly import Workspace
 from ..network.helium import helium_rate_constants, reduce_helium
-from ..network.rates import RateConstants, rate_constants
+from ..network.rates import RateConstants, rate_constants, stack
 from ..network.reduction import exchange_pairs, reduce_at
-from ..network.tabulation import stack
 from .effective import log_capture
 from .stage import StageTable, log_rates
 from .table import EffectiveTable

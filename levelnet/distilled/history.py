@@ -140,9 +140,9 @@ def history_from_table(  # noqa: PLR0913 (each is a choice of the caller)
     if not _TIGHTEST <= relative <= _LOOSEST:
         raise InputError(f"relative = {relative:g}: allowed are {_TIGHTEST:g} to {_LOOSEST:g}")
     physics = choose_physics(table, fine_structure_change, electron_mass_change)
-    check_helium(table, cosmology, physics)
     redshift = _redshifts(table, redshifts)
     chosen = table.setup.lines if lines is None else lines
+    check_helium(table, cosmology, chosen, physics)
     if chosen.transfer is not None:
         if sensitivities or rate_scales:
             raise InputError(
@@ -181,7 +181,7 @@ def history_from_table(  # noqa: PLR0913 (each is a choice of the caller)
     return _assemble(cosmology, redshift, run, seen, found, left_out(chosen))
 
 
-def _with_helium(  # noqa: PLR0913 (what the caller has worked out)
+def _with_helium(
     table: EffectiveTable,
     atom: Atom,
     cosmology: Cosmology,

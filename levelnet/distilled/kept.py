@@ -104,16 +104,39 @@ def recombines(table: EffectiveTable, cosmology: Cosmology) -> bool:
     return table.helium is not None and cosmology.helium_ratio() > 0.0
 
 
-def check_helium(table: EffectiveTable, cosmology: Cosmology, physics: Physics) -> None:
+def check_no_field(setup: Setup) -> None:
+    """Refuse to distil helium together with a field: no history from the table has both."""
+    if setup.helium_recombines and setup.lines.transfer is not None:
+        raise InputError(
+            'lines.hydrogen = "transfer": a table with levels of helium has no histories with a '
+            'field; allowed there are "closed", "open" and "sobolev"; levelnet solve has both'
+        )
+
+
+def check_helium(
+    table: EffectiveTable, cosmology: Cosmology, lines: Lines, physics: Physics
+) -> None:
     """Refuse what a table with levels of helium does not hold, or its certificate not cover."""
     if not recombines(table, cosmology):
+        if table.helium is None and lines.helium is not None:
+            raise InputError(
+                f'lines.helium = "{lines.helium}": this table holds no levels of helium; distil '
+                "the setup with helium.n_max = 2 or above"
+            )
         return
+    there = table.setup.lines
+    for name in ("helium", "helium_higher_lines", "helium_continuum"):
+        if getattr(lines, name) != getattr(there, name):
+            raise InputError(
+                f"lines.{name}: the table was distilled with other lines of helium; distil the "
+                "setup with these"
+            )
     if physics != Physics():
         raise InputError(
-            "fine_structure_change, electron_mass_change: not known for levels of helium; the table "
-            "holds them"
+            "fine_structure_change, electron_mass_change: not known for levels of helium, and the "
+            "table holds them"
         )
-    if table.setup.lines.transfer is not None:
+    if lines.transfer is not None:
         raise InputError(
             'lines.hydrogen = "transfer": not with a table that holds levels of helium; levelnet '
             "solve has both"
@@ -130,6 +153,15 @@ def check_helium(table: EffectiveTable, cosmology: Cosmology, physics: Physics) 
 def _mass_fraction(cosmology: Cosmology) -> float:
     mass = const.HELIUM_HYDROGEN_MASS_RATIO * cosmology.helium_ratio()
     return mass / (1.0 + mass)
+
+
+def check_without_helium(table: EffectiveTable, who: str) -> None:
+    """Refuse a table with levels of helium for what knows hydrogen alone."""
+    if table.helium is not None:
+        raise InputError(
+            f"{who}: knows hydrogen alone, and this table holds levels of helium; distil the setup "
+            "with helium.n_max = 0"
+        )
 
 
 def check_without_field(lines: Lines) -> None:

@@ -54,9 +54,7 @@ def observe_electrons(
 ) -> Observables:
     """z_*, r_s and k_D from n_e/n_H (dimensionless) at the points of `grid`, and `early` before."""
     names = tuple(Observables.__slots__)
-    seen = observe(
-        cosmology, grid, electrons, thomson, names=names, early_electron_fraction=early
-    )
+    seen = observe(cosmology, grid, electrons, thomson, names=names, early_electron_fraction=early)
     return Observables(*seen.value.tolist())
 
 

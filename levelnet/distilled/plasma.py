@@ -19,7 +19,9 @@ from ..errors import InputError, RangeError
 from ..escape.sobolev import sobolev_optical_depth
 from ..history.helium import COLDEST_K, EBB, FADING, GONE, PULL
 from ..kernels.effective import Atom
-from ..kernels.effective_plasma import OUTSIDE_ESCAPE, Plasma, plasma_history
+from ..kernels.effective_helium import HeliumLines
+from ..kernels.effective_plasma import Plasma
+from ..kernels.plasma_steps import OUTSIDE_ESCAPE, plasma_history
 from .fast import FastHelium, fractions
 from .helium_escape import LineTable
 from .stage import StageTable, stage_atom
@@ -27,7 +29,7 @@ from .table import EffectiveTable
 from .universe import make_universe
 
 # Local errors allowed in a step over the error asked: of hydrogen's ionization and T_m, of helium.
-_LOCAL, _LOCAL_HELIUM = 2.0, 10.0
+_LOCAL, _LOCAL_HELIUM = 2.0, 20.0
 _FIRST_STEP, _MAX_STEPS = 1e-3, 20_000
 # T_r above which a start is not looked for, and below; at the first helium is doubly ionized in any
 # universe that the table admits.
@@ -137,7 +139,7 @@ def electrons_of(state: FloatArray, cosmology: Cosmology) -> FloatArray:
 
 
 @lru_cache(maxsize=8)
-def _packed(table: EffectiveTable) -> tuple[Atom, Atom, object, FloatArray]:
+def _packed(table: EffectiveTable) -> tuple[Atom, Atom, HeliumLines, FloatArray]:
     """He I, He II (or He I again, unused), the lines, and Saha coefficients of the three ions."""
     stage, ion, lines = table.helium, table.helium_ion, table.helium_lines
     assert stage is not None and lines is not None

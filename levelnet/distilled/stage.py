@@ -176,7 +176,9 @@ def stage_atom(
     constants[0] = decay_rate_per_s
     return Atom(
         np.array([stage.log_low, stage.log_high, stage.ratio_low, stage.ratio_high]),
-        *(np.array(part) for part in (stage.equilibrium, stage.exchange, stage.departure)),
+        np.array(stage.equilibrium),
+        np.array(stage.exchange),
+        np.array(stage.departure),
         np.array(stage.lower),
         np.array(stage.upper),
         np.stack([stage.barrier_k, stage.rise_k, stage.log_weight_ratio]),

@@ -19,7 +19,9 @@ def _folder_name() -> str:
     return f"levelnet-{text.hexdigest()[:16]}"
 
 
-_FOLDER = os.path.join(numba.config.CACHE_DIR or Path(__file__).parent / "__pycache__", _folder_name())
+# numba fills in its options as it starts.
+_options: Any = numba.config
+_FOLDER = os.path.join(_options.CACHE_DIR or Path(__file__).parent / "__pycache__", _folder_name())
 
 
 def kernel(function: Function) -> Function:
@@ -30,14 +32,14 @@ def kernel(function: Function) -> Function:
     folder on disk is named by the text of all of them.
     """
     # numba chooses the folder here; where it cannot be written it takes one of its own.
-    own, numba.config.CACHE_DIR = numba.config.CACHE_DIR, _FOLDER
+    own, _options.CACHE_DIR = _options.CACHE_DIR, _FOLDER
     try:
         return _compiled(function, cache=True)
     except RuntimeError:
         # Neither the package folder nor the user's cache folder can be written: compile each time.
         return _compiled(function, cache=False)
     finally:
-        numba.config.CACHE_DIR = own
+        _options.CACHE_DIR = own
 
 
 def inlined(function: Function) -> Function:

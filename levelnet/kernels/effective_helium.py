@@ -68,13 +68,13 @@ class HeliumLines(NamedTuple):
 class Memory(NamedTuple):
     """Accepted steps: times (n,), ln of the distortion on red sides (n, n_lines), ln(n_HI/H) (n,).
 
-    count (1,): how many there are.
+    taken (1,): how many there are.
     """
 
     time: FloatArray
     red: FloatArray
     hydrogen: FloatArray
-    count: IntArray
+    taken: IntArray
 
 
 class LineRoom(NamedTuple):
@@ -178,7 +178,7 @@ def gain(lines: HeliumLines, k: int, room: LineRoom) -> tuple[float, float, floa
 @kernel
 def _look_back(memory: Memory, time: float, knot: FloatArray) -> int:
     """Weights (and slopes) of the cubic through the four nearest steps; gives the first of them."""
-    count = memory.count[0]
+    count = memory.taken[0]
     above = count
     while above > 0 and memory.time[above - 1] > time:
         above -= 1
@@ -195,7 +195,7 @@ def _look_back(memory: Memory, time: float, knot: FloatArray) -> int:
                     rise = (rise * (time - memory.time[first + j]) + weight) / gap
                     weight *= (time - memory.time[first + j]) / gap
         knot[0, k], knot[1, k] = weight, rise
-    return first
+    return int(first)
 
 
 @inlined
@@ -205,11 +205,11 @@ def _blue_side(
     """Ln of the distortion that lights line k, its slope in ln a, and by ln n_HI."""
     above, delay = lines.lit_by[k], lines.line[DELAY, k]
     then = place.log_scale - delay
-    if memory.count[0] == 0 or then <= memory.time[0]:
+    if memory.taken[0] == 0 or then <= memory.time[0]:
         return 0.0, 0.0, 0.0
     first = _look_back(memory, then, knot)
     sent, sent_slope, column, column_slope = 0.0, 0.0, 0.0, 0.0
-    for j in range(min(4, memory.count[0])):
+    for j in range(min(4, memory.taken[0])):
         sent += knot[0, j] * memory.red[first + j, above]
         sent_slope += knot[1, j] * memory.red[first + j, above]
         column += knot[0, j] * memory.hydrogen[first + j]
@@ -311,9 +311,7 @@ def _couple(
 
 
 @inlined
-def _gather(
-    flow: float, hubble_slope: float, room: Room, out: FloatArray
-) -> None:
+def _gather(flow: float, hubble_slope: float, room: Room, out: FloatArray) -> None:
     """Derivatives of a flow from those by what the table and the lines hang on."""
     by = room.slope
     out[VALUE] = flow
@@ -359,7 +357,13 @@ def first_flow(
 
 @inlined
 def second_flow(
-    atom: Atom, place: Place, double: float, single: float, room: Room, slopes: bool, out: FloatArray
+    atom: Atom,
+    place: Place,
+    double: float,
+    single: float,
+    room: Room,
+    slopes: bool,
+    out: FloatArray,
 ) -> None:
     """Net recombinations to He II per nucleus and second and, with `slopes`, their derivatives."""
     flow = stage_flow(
@@ -390,7 +394,7 @@ def remember(
     line_room: LineRoom,
 ) -> None:
     """Keep what an accepted step, whose slopes have just been found, sends to lines below."""
-    here = memory.count[0]
+    here = memory.taken[0]
     memory.time[here], memory.hydrogen[here] = place.log_scale, place.hydrogen
     for k in range(lines.upper.shape[0]):
         i = lines.upper[k]
@@ -401,6 +405,6 @@ def remember(
         own = departure + math.log(-math.expm1(-exponent))
         own -= math.log1p(-math.exp(min(departure - exponent, -1e-12)))
         depth, blue = line_room.line[0, k], line_room.line[1, k]
-        taken = -math.expm1(-depth)
-        memory.red[here, k] = add_logs(own + math.log(taken), blue - depth) if taken else blue
-    memory.count[0] = here + 1
+        lost = -math.expm1(-depth)
+        memory.red[here, k] = add_logs(own + math.log(lost), blue - depth) if lost else blue
+    memory.taken[0] = here + 1
