@@ -30,13 +30,13 @@ from ..pieces import Pieces, code_digest, content_key
 
 # Spacing of the nodes in ln of the columns and in ln T_r; the error is measured, and grows as the
 # fourth power.
-_SPACING = (0.45, 0.45, 0.2)
+SPACING = (0.45, 0.45, 0.2)
 # Depth of the strongest line, and of the continuum per Doppler width of it, that the table holds.
 # Below either, P goes to S in proportion; above, there is no such universe.
 _DEPTH, _CONTINUUM = (1e-2, 1e9), (1e-7, 1e5)
 _SEED, _POINTS = 20_260_103, 400
 # P is computed to no better than this, and the table is of no use if it errs more.
-_LARGEST_ERROR = 3e-3
+LARGEST_ERROR = 3e-3
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -142,7 +142,6 @@ def line_table(
     range_k: tuple[float, float],
     tell: Callable[[str, float], None],
     pieces: Pieces | None = None,
-    spacing: tuple[float, float, float] = _SPACING,
 ) -> LineTable:
     """Make the table of the lines of He I.
 
@@ -162,8 +161,6 @@ def line_table(
         Progress.
     pieces : Pieces, optional
         Where the nodes are kept.
-    spacing : tuple of float
-        Of the nodes along each axis.
 
     Raises
     ------
@@ -189,20 +186,20 @@ def line_table(
     )
     if not treatment.absorbs:
         return plain
-    axis, counts = _axes(lines, range_k, spacing)
+    axis, counts = _axes(lines, range_k)
     values = _recalled(lines, treatment, axis, counts, tell, pieces)
-    table = dataclasses.replace(plain, escape=_coefficients(values), axis=axis)
+    table = dataclasses.replace(plain, escape=coefficients(values), axis=axis)
     largest, rms = _errors(table, lines, treatment)
-    if largest.max() > _LARGEST_ERROR:
+    if largest.max() > LARGEST_ERROR:
         raise SolveError(
             f"escape from He I lines: the table errs by {largest.max():.1e} in ln P; allowed is "
-            f"{_LARGEST_ERROR:g}"
+            f"{LARGEST_ERROR:g}"
         )
     return dataclasses.replace(table, escape_error=largest, escape_rms=rms)
 
 
 def _axes(
-    lines: HeliumGroundLines, range_k: tuple[float, float], spacing: tuple[float, float, float]
+    lines: HeliumGroundLines, range_k: tuple[float, float]
 ) -> tuple[FloatArray, tuple[int, ...]]:
     """First node and spacing of each axis, and the numbers of nodes."""
     strongest = int(np.argmax(lines.einstein_a_per_s * lines.wavelength_cm**3 * lines.weight_ratio))
@@ -215,7 +212,7 @@ def _axes(
         (math.log(range_k[0]), math.log(range_k[1])),
     )
     axis, counts = np.empty((3, 2)), []
-    for k, ((low, high), step) in enumerate(zip(edges, spacing, strict=True)):
+    for k, ((low, high), step) in enumerate(zip(edges, SPACING, strict=True)):
         cells = math.ceil((high - low) / step)
         axis[k] = low, (high - low) / cells
         counts.append(cells + 1)
@@ -287,7 +284,7 @@ def _plain(values: FloatArray) -> list[float]:
     return [float(one) for one in values]
 
 
-def _coefficients(values: FloatArray) -> FloatArray:
+def coefficients(values: FloatArray) -> FloatArray:
     """Coefficients of uniform cubic B-splines through `values`, along the last three axes.
 
     At the ends the third derivative runs on through the first node inside (not-a-knot).

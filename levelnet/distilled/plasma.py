@@ -78,15 +78,10 @@ def run_plasma(
     RangeError
         Where a line is deeper than the table of escape probabilities holds.
     """
-    first, second, lines, saha = _packed(table)
     top_k = min(HOTTEST_K, math.exp(float(hydrogen.span[1])))
     hottest = math.log(cosmology.cmb_temperature_k / top_k)
     low = min(hottest, float(s[0]), float(hydrogen_top(hydrogen, cosmology)))
-    universe = make_universe(cosmology, low - 1e-3, float(s[-1]))
-    limits = np.array([COLDEST_K, EBB, PULL, GONE, FADING])
-    plasma = Plasma(
-        hydrogen, first, second, lines, universe, int(table.helium_ion is not None), saha, limits
-    )
+    plasma = plasma_of(table, hydrogen, cosmology, low - 1e-3, float(s[-1]))
     points = np.empty(0) if grid is None else grid.points
     run = PlasmaRun(len(s), len(points))
     local = relative * np.array([_LOCAL, _LOCAL, _LOCAL_HELIUM, _LOCAL_HELIUM])
@@ -116,6 +111,23 @@ def run_plasma(
             f"{math.expm1(-float(run.report[4])):g}"
         )
     return run
+
+
+def plasma_of(
+    table: EffectiveTable, hydrogen: Atom, cosmology: Cosmology, low: float, high: float
+) -> Plasma:
+    """Pack a table with helium and a universe from s = ln a = `low` to `high` for the kernels."""
+    first, second, lines, saha = _packed(table)
+    return Plasma(
+        hydrogen,
+        first,
+        second,
+        lines,
+        make_universe(cosmology, low, high),
+        int(table.helium_ion is not None),
+        saha,
+        np.array([COLDEST_K, EBB, PULL, GONE, FADING]),
+    )
 
 
 def hydrogen_top(hydrogen: Atom, cosmology: Cosmology) -> float:

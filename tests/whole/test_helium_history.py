@@ -317,8 +317,6 @@ def test_users_that_know_hydrogen_alone_say_so() -> None:
     setup = helium_setup()
     with pytest.raises(InputError, match=r"helium.n_max = 5: weigh knows hydrogen alone"):
         weigh(setup, ["x_e(900)"])
-    with pytest.raises(InputError, match=r"helium.n_max = 5: a distilled table knows"):
-        distill(setup)
 
 
 def test_every_output_was_delivered() -> None:
