@@ -11,7 +11,6 @@ from scipy import constants as si
 from scipy.integrate import solve_ivp
 
 import levelnet
-from levelnet.distilled.build import distill
 from levelnet.errors import InputError, Outcome
 from levelnet.history.course import electron_fraction_at, state_at
 from levelnet.history.integrate import integrate_history
