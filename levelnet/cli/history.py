@@ -141,8 +141,8 @@ def chosen_setup(table: EffectiveTable, options: argparse.Namespace) -> Setup:
 
 
 def _check_helium(setup: Setup, table: EffectiveTable, options: argparse.Namespace) -> None:
-    """Refuse another helium than that of the table; none at all it always knows."""
-    if not setup.helium_recombines:
+    """Refuse another helium than that of the table; a universe without any it always knows."""
+    if setup.cosmology.helium_ratio() == 0.0:
         return
     for name in (
         "n_max",

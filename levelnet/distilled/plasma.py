@@ -28,8 +28,9 @@ from .stage import StageTable, stage_atom
 from .table import EffectiveTable
 from .universe import make_universe
 
-# Local errors allowed in a step over the error asked: of hydrogen's ionization and T_m, of helium.
-_LOCAL, _LOCAL_HELIUM = 2.0, 20.0
+# Local errors allowed in a step over the error asked, of u, v, a and b; with them x_e was measured
+# to 0.8 of what is asked.
+_LOCAL = np.array([2.0, 2.0, 20.0, 6.0])
 _FIRST_STEP, _MAX_STEPS = 1e-3, 20_000
 # T_r above which a start is not looked for, and below; at the first helium is doubly ionized in any
 # universe that the table admits.
@@ -84,7 +85,6 @@ def run_plasma(
     plasma = plasma_of(table, hydrogen, cosmology, low - 1e-3, float(s[-1]))
     points = np.empty(0) if grid is None else grid.points
     run = PlasmaRun(len(s), len(points))
-    local = relative * np.array([_LOCAL, _LOCAL, _LOCAL_HELIUM, _LOCAL_HELIUM])
     assert table.helium_lines is not None
     run.status = plasma_history(
         plasma,
@@ -92,7 +92,7 @@ def run_plasma(
         points,
         np.array([top_k, _COLDEST_START_K]),
         math.sqrt(_START * relative),
-        local,
+        _LOCAL * relative,
         float(np.min(table.helium_lines.delay, initial=10.0)),
         _FIRST_STEP,
         run.state,
