@@ -124,6 +124,7 @@ def chosen_setup(table: EffectiveTable, options: argparse.Namespace) -> Setup:
                     f"{options.setup}: hydrogen.{shown} = {asked}, but the table {options.table} "
                     f"was distilled with {there}"
                 )
+        _check_helium(setup, table, options)
         _check_overrides(setup, table, options)
         return setup
     cosmology: dict[str, Any] = _given(options, _PARAMETERS)
@@ -137,6 +138,24 @@ def chosen_setup(table: EffectiveTable, options: argparse.Namespace) -> Setup:
         physics=dataclasses.replace(setup.physics, **changes),
     )
     return replaced
+
+
+def _check_helium(setup: Setup, table: EffectiveTable, options: argparse.Namespace) -> None:
+    """Refuse another helium than that of the table; a universe without any it always knows."""
+    if setup.cosmology.helium_ratio() == 0.0:
+        return
+    for name in (
+        "n_max",
+        "intercombination_rate_per_s",
+        "two_photon_rate_per_s",
+        "helium_ion",
+    ):
+        asked, there = getattr(setup.helium, name), getattr(table.setup.helium, name)
+        if asked != there:
+            raise InputError(
+                f"{options.setup}: helium.{name} = {asked}, but the table {options.table} was "
+                f"distilled with {there}"
+            )
 
 
 def _check_overrides(setup: Setup, table: EffectiveTable, options: argparse.Namespace) -> None:

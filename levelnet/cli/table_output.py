@@ -6,6 +6,12 @@ import math
 from typing import TYPE_CHECKING, Any
 
 from ..quantities import OBSERVABLES
+from .helium_table_output import (
+    fraction_columns,
+    fraction_values,
+    helium_lines,
+    helium_values,
+)
 from .output import aligned, atom_size, row
 
 if TYPE_CHECKING:
@@ -28,6 +34,7 @@ def table_values(table: EffectiveTable) -> dict[str, Any]:
         "setup_digest": setup.digest,
         "hydrogen_n_max": setup.hydrogen.n_max,
         "hydrogen_resolve_l_to": setup.hydrogen.highest_resolved,
+        "helium": helium_values(table),
         "kept_levels": level_names(table.kept),
         "tolerance": table.tolerance,
         "radiation_temperature_range_k": list(table.radiation_range_k),
@@ -63,6 +70,7 @@ def table_summary(table: EffectiveTable) -> str:
             f"setup {values['setup_digest']}: hydrogen {atom_size(table.setup)}, kept "
             + ", ".join(values["kept_levels"]),
         ),
+        *helium_lines(table),
         row("range", f"T_r = {low:g} to {high:g} K, T_m/T_r = {least:g} to {most:g}"),
         row(
             "size",
@@ -138,6 +146,7 @@ def distilled_values(history: FastHistory, setup: Setup | None) -> dict[str, Any
             "neutral_hydrogen_fraction": history.neutral_hydrogen_fraction,
             "matter_temperature_k": history.matter_temperature_k,
             "radiation_temperature_k": history.radiation_temperature_k,
+            **fraction_values(history),
         },
     }
 
@@ -156,12 +165,14 @@ def distilled_summary(history: FastHistory) -> str:
         ):
             label, value = OBSERVABLES[name].label, getattr(seen, name)
             lines.append(row(label, form.format(value) if math.isfinite(value) else "not reached"))
-    head = ("z", "x_e", "x_HI", "T_m (K)", "T_r (K)")
+    more, fractions = fraction_columns(history)
+    head = ("z", "x_e", "x_HI", *more, "T_m (K)", "T_r (K)")
     body = [
         (
             f"{history.redshift[k]:.2f}",
             f"{history.free_electron_fraction[k]:.6e}",
             f"{history.neutral_hydrogen_fraction[k]:.6e}",
+            *(f"{values[k]:.6e}" for values in fractions),
             f"{history.matter_temperature_k[k]:.6g}",
             f"{history.radiation_temperature_k[k]:.6g}",
         )

@@ -21,15 +21,17 @@ from ..network.tabulation import TabulatedReduction, node_count
 from ..numerics.chebyshev import ChebyshevSeries, chebyshev_nodes
 from ..pieces import Pieces
 from .certificate import certify as certify_table
-from .kept import check_lines, check_overrides, choose_kept
+from .helium_build import distill_helium
+from .kept import check_helium_setup, check_lines, check_no_field, check_overrides, choose_kept
 from .nodes import Atom, NodeSource, outline
 from .patches import Patches, Ranges, fit_patches
+from .plasma import HOTTEST_K
 from .table import EffectiveTable
 
 Progress = Callable[[str, float], None]
 
 TIGHTEST, LOOSEST = 1e-10, 1e-2
-_COLDEST_K, _HOTTEST_K = 5.0, 20_000.0
+_COLDEST_K, _COLD_K, _HOT_K = 5.0, 25.0, 9000.0
 _LEAST_RATIO, _LARGEST_RATIO = 0.004, 10.0
 # Shares of the tolerance: what the series through the exact nodes may err, and the patches.
 _SERIES, _PATCHES = 0.1, 0.5
@@ -44,7 +46,7 @@ def distill(  # noqa: PLR0913  choices by name, each with a default
     *,
     kept: Iterable[tuple[int, int]] | None = None,
     tolerance: float = 1e-8,
-    radiation_range_k: tuple[float, float] = (25.0, 9000.0),
+    radiation_range_k: tuple[float, float] | None = None,
     ratio_range: tuple[float, float] = (0.01, 4.0),
     executor: Executor | None = None,
     workers: int = 1,
@@ -63,8 +65,9 @@ def distill(  # noqa: PLR0913  choices by name, each with a default
     tolerance : float, 1e-10 to 1e-2 (dimensionless)
         Largest error in the ln of each rate, measured off the nodes; of exchange rates with the
         Boltzmann factor of their barrier kept out.
-    radiation_range_k : tuple of float, K, within 5 to 20000
-        Range of T_r, for the measured constants; the default holds z = 10 to 3000 at 2.7255 K.
+    radiation_range_k : tuple of float, K, within 5 to 27500
+        Range of T_r, for the measured constants. None: 25 to 9000 K, z = 10 to 3000 at 2.7255 K;
+        with levels of helium up to 27500 K, where it is doubly ionized.
     ratio_range : tuple of float, within 0.004 to 10
         Range of T_m/T_r, 1 inside. Matter above 8000 K and above T_r is refused all the same.
     executor : concurrent.futures.Executor, optional
@@ -96,8 +99,9 @@ def distill(  # noqa: PLR0913  choices by name, each with a default
     SolveError
         If the tolerance is out of reach, or a worker process dies again and again on one input.
     """
-    setup.require_inert_helium("a distilled table")
     choice = choose_kept(setup, kept)
+    if radiation_range_k is None:
+        radiation_range_k = _COLD_K, HOTTEST_K if setup.helium_recombines else _HOT_K
     ranges = _ranges(radiation_range_k, ratio_range)
     if not TIGHTEST <= tolerance <= LOOSEST:
         raise InputError(f"tolerance = {tolerance:g}: allowed are {TIGHTEST:g} to {LOOSEST:g}")
@@ -105,6 +109,8 @@ def distill(  # noqa: PLR0913  choices by name, each with a default
     tell = progress or (lambda stage, fraction: None)
     check_overrides(setup)
     check_lines(setup.lines)
+    check_no_field(setup)
+    check_helium_setup(setup)
     atom = Atom.of(setup.hydrogen, choice, setup.rates.network)
     tell("atomic data", 0.0)
     with threadpool_limits(limits=1, user_api="blas"):
@@ -115,9 +121,17 @@ def distill(  # noqa: PLR0913  choices by name, each with a default
         tell("fitting patches", 0.0)
         patches = fit_patches(series, constants, ranges, _PATCHES * tolerance)
         table = _table(setup, atom, tolerance, ranges, patches)
+        helium = None
+        if setup.helium_recombines:
+            tolerances = _SERIES * tolerance, _PATCHES * tolerance
+            helium = distill_helium(setup, tolerances, tell, pieces)
+            table = dataclasses.replace(
+                table, helium=helium.first, helium_ion=helium.ion, helium_lines=helium.lines
+            )
         if certify:
             reference = _reference(source, ranges, tolerance)
-            certificate = certify_table(table, source, reference, tell)
+            atoms = None if helium is None else helium.atoms
+            certificate = certify_table(table, source, reference, tell, atoms)
             table = dataclasses.replace(table, certificate=certificate)
     tell("done", 1.0)
     return table
@@ -204,10 +218,10 @@ def _table(
 
 def _ranges(radiation_k: tuple[float, float], ratio: tuple[float, float]) -> Ranges:
     low, high = radiation_k
-    if not _COLDEST_K <= low < high <= _HOTTEST_K:
+    if not _COLDEST_K <= low < high <= HOTTEST_K:
         raise InputError(
             f"radiation_range_k = ({low:g}, {high:g}): allowed are ascending temperatures from "
-            f"{_COLDEST_K:g} to {_HOTTEST_K:g} K"
+            f"{_COLDEST_K:g} to {HOTTEST_K:g} K"
         )
     least, largest = ratio
     if not _LEAST_RATIO <= least < 1.0 < largest <= _LARGEST_RATIO:

@@ -18,14 +18,15 @@ from ..arrays import FloatArray, frozen_array
 from ..background.cosmology import Cosmology
 from ..errors import LevelnetError
 from ..escape.lines import Lines
-from ..history.equations import ionized_and_neutral
-from ..history.integrate import integrate_slow, setup_handover, slow_equations
+from ..history.helium_atom import HeliumAtoms
+from ..history.integrate import handover_of, integrate_slow, setup_handover, slow_equations
 from ..history.setup import Setup
 from ..network.rates import RateConstants
 from ..network.reduced import KeptLevels, Reduced
 from ..network.scaled import with_scales
 from ..network.tabulation import TabulatedReduction
 from .effective import EffectiveRates, log_capture, log_exchange, log_photo
+from .helium_errors import fresh_equations, helium_errors
 from .history import history_from_table
 from .nodes import NodeSource, outline
 from .table import COLLISIONS_K, EffectiveTable
@@ -34,10 +35,11 @@ Progress = Callable[[str, float], None]
 
 SEED = 20_260_101
 _RADIATION_POINTS, _MATTER_POINTS = 32, 16
-FIRST_REDSHIFT, LAST_REDSHIFT = 1600.0, 20.0
+FIRST_REDSHIFT, LAST_REDSHIFT, HELIUM_REDSHIFT = 1600.0, 20.0, 8000.0
 _REDSHIFTS = 80
-# Both histories are stepped better than a table of the default tolerance errs.
-_STEPPING = 1e-8
+# Both histories are stepped better than a table of the default tolerance errs; with helium, whose
+# full history takes a minute at that, nearly so.
+_STEPPING, _STEPPING_HELIUM = 1e-8, 1e-7
 
 # Invented: little baryonic matter in a fast, warm universe, and much of it in a slow, cool one.
 FAR_COSMOLOGIES = (
@@ -71,17 +73,20 @@ class Certificate:
     n_points : int
         How many pairs of T_r and T_m; uniform in ln T_r and ln(T_m/T_r) over the table.
     rate_names : tuple of str
-        "recombination 2s", "photoionization 2s", ..., "exchange 2p-2s", ...
+        "recombination 2s", "photoionization 2s", ..., "exchange 2p-2s", ...; with helium
+        "He I recombination 2 1S", ..., "He II ..." and, where hydrogen absorbs in the lines,
+        "He I escape 2 1P-1 1S", ...
     largest_error, rms_error : ndarray, shape (n_rates,)
         Of the ln of each rate against exact reductions; exchange downward.
     cosmologies : tuple of str
         "setup", then the far ones, each with its parameters.
     redshift : ndarray, shape (n_redshift,)
-        Where histories are compared, descending from 1600 to 20, as far as the table reaches.
+        Where histories are compared, descending from 1600 (with helium 8000) to 20, as far as the
+        table reaches.
     history_error : ndarray, shape (n_cosmologies, n_redshift)
         Relative error of x_e of the distilled history (:func:`levelnet.history_from_table`) against
         the full network; NaN where the table does not reach, or hydrogen has no channel to the
-        ground state. Both are stepped to 1e-8.
+        ground state. Both are stepped to 1e-8, with helium to 1e-7.
     """
 
     seed: int
@@ -118,6 +123,7 @@ def certify(
     source: NodeSource,
     reference: TabulatedReduction,
     tell: Progress,
+    helium: HeliumAtoms | None = None,
 ) -> Certificate:
     """Measure the errors of a table.
 
@@ -131,23 +137,33 @@ def certify(
         The full network, by a series of its own, for the histories.
     tell : callable
         Progress.
+    helium : HeliumAtoms, optional
+        Helium behind the table, where it has it.
     """
     tell("certificate: rates", 0.0)
     n_points, names, errors = rate_errors(table, source)
-    redshift = np.geomspace(1.0 + FIRST_REDSHIFT, 1.0 + LAST_REDSHIFT, _REDSHIFTS) - 1.0
-    redshift[[0, -1]] = FIRST_REDSHIFT, LAST_REDSHIFT
+    largest, rms = np.abs(errors).max(axis=0), np.sqrt(np.mean(errors**2, axis=0))
+    first, count = FIRST_REDSHIFT, _REDSHIFTS
+    if helium is not None:
+        of_helium = helium_errors(table, helium)
+        names = (*names, *of_helium.names)
+        largest = np.concatenate([largest, of_helium.largest])
+        rms = np.concatenate([rms, of_helium.rms])
+        first, count = HELIUM_REDSHIFT, 2 * _REDSHIFTS
+    redshift = np.geomspace(1.0 + first, 1.0 + LAST_REDSHIFT, count) - 1.0
+    redshift[[0, -1]] = first, LAST_REDSHIFT
     labels, rows = [], []
     cosmologies = (table.setup.cosmology, *FAR_COSMOLOGIES)
     for k, cosmology in enumerate(cosmologies):
         tell("certificate: histories", k / len(cosmologies))
         labels.append("setup" if k == 0 else describe(cosmology))
-        rows.append(_history_error(table, reference, cosmology, redshift))
+        rows.append(_history_error(table, reference, cosmology, redshift, helium))
     return Certificate(
         SEED,
         n_points,
         names,
-        np.abs(errors).max(axis=0),
-        np.sqrt(np.mean(errors**2, axis=0)),
+        largest,
+        rms,
         tuple(labels),
         redshift,
         np.array(rows),
@@ -256,6 +272,7 @@ def _history_error(
     reference: TabulatedReduction,
     cosmology: Cosmology,
     redshift: FloatArray,
+    helium: HeliumAtoms | None,
 ) -> FloatArray:
     """Relative error of x_e at `redshift`; NaN where table or history do not reach."""
     error = np.full(len(redshift), np.nan)
@@ -264,15 +281,17 @@ def _history_error(
     inside = (kelvin >= low) & (kelvin <= high)
     if inside.sum() < 2:
         return error
-    accuracy = dataclasses.replace(table.setup.accuracy, relative=_STEPPING)
+    stepping = _STEPPING if helium is None else _STEPPING_HELIUM
+    accuracy = dataclasses.replace(table.setup.accuracy, relative=stepping)
     # A field changes none of the rates; Sobolev's treatment weighs them as well.
     chosen = table.setup.lines
     lines = chosen if chosen.transfer is None else Lines(lyman_lines=chosen.lyman_lines)
     setup = dataclasses.replace(table.setup, cosmology=cosmology, accuracy=accuracy, lines=lines)
     try:
-        full = _full_history(setup, with_scales(reference, table.scales), redshift[inside])
+        reduced = with_scales(reference, table.scales)
+        full = _full_history(setup, reduced, redshift[inside], helium)
         fast = history_from_table(
-            table, cosmology, redshifts=redshift[inside], lines=lines, relative=_STEPPING
+            table, cosmology, redshifts=redshift[inside], lines=lines, relative=stepping
         )
     except LevelnetError:  # no channel to the ground state, or a start beyond the table
         return error
@@ -280,13 +299,14 @@ def _history_error(
     return error
 
 
-def _full_history(setup: Setup, reduced: Reduced, redshift: FloatArray) -> FloatArray:
+def _full_history(
+    setup: Setup, reduced: Reduced, redshift: FloatArray, helium: HeliumAtoms | None
+) -> FloatArray:
     """x_e at `redshift` from the full network; NaN above the hand-over and below the end."""
-    handover = setup_handover(setup)
-    trajectory = integrate_slow(
-        setup, slow_equations(setup, reduced), handover, redshift, lambda stage, fraction: None
-    )
+    equations = slow_equations(setup, reduced, helium=fresh_equations(helium))
+    handover = handover_of(setup, equations) if helium else setup_handover(setup)
+    trajectory = integrate_slow(setup, equations, handover, redshift, lambda stage, fraction: None)
     time, wanted = trajectory.time, -np.log1p(redshift)
     nearest = np.argmin(np.abs(time[None, :] - wanted[:, None]), axis=1)
-    ionized = [ionized_and_neutral(float(u))[0] for u in trajectory.state[nearest, 0]]
-    return np.where(np.abs(time[nearest] - wanted) < 1e-12, ionized, np.nan)
+    electrons = [equations.electron_fraction(state) for state in trajectory.state[nearest]]
+    return np.where(np.abs(time[nearest] - wanted) < 1e-12, electrons, np.nan)

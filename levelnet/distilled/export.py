@@ -21,7 +21,7 @@ from ..history.atom import open_lyman_lines, resonance_lines
 from .about import about_lines, level_names, pair_names
 from .effective import NEVER
 from .grid_text import grid_text
-from .kept import check_without_field
+from .kept import check_without_field, check_without_helium
 from .stimulation import stimulation_c, stimulation_fortran, stimulation_polynomials
 from .table import COLLISIONS_K, EffectiveTable
 
@@ -65,6 +65,7 @@ def exported_texts(table: EffectiveTable, language: str, name: str) -> dict[str,
     """
     if language not in LANGUAGES:
         raise InputError(f'export = "{language}": allowed are {", ".join(LANGUAGES)}')
+    check_without_helium(table, f'export = "{language}"')
     if language == "csv":
         return {f"{name}.csv": grid_text(table)}
     check_without_field(table.setup.lines)

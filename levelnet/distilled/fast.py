@@ -49,6 +49,28 @@ class Sensitivities:
 
 
 @dataclass(frozen=True, slots=True, eq=False)
+class FastHelium:
+    """Fractions of the helium nuclei, each to full relative precision; shape (n_redshift,).
+
+    Attributes
+    ----------
+    neutral_helium_fraction, singly_ionized_helium_fraction, doubly_ionized_helium_fraction : \
+ndarray, dimensionless
+        x_HeI, x_HeII and x_HeIII; their sum is 1.
+    """
+
+    neutral_helium_fraction: FloatArray
+    singly_ionized_helium_fraction: FloatArray
+    doubly_ionized_helium_fraction: FloatArray
+
+    def __post_init__(self) -> None:
+        """Check shapes and make every array read-only."""
+        shape = self.neutral_helium_fraction.shape
+        for name in self.__slots__:
+            frozen_array(self, name, shape)
+
+
+@dataclass(frozen=True, slots=True, eq=False)
 class FastHistory:
     """A history from a table; arrays of shape (n_redshift,) over descending redshift.
 
@@ -78,6 +100,8 @@ class FastHistory:
         Largest relative change of x_e on a frequency grid twice as coarse; 0 without a field.
     notes : tuple of str
         What the line treatment leaves out, and how the field was counted.
+    helium : FastHelium or None
+        Fractions of helium, where the table has it; None: neutral and inert.
     """
 
     outcome: Outcome
@@ -95,6 +119,7 @@ class FastHistory:
     field: RadiationField | None = None
     frequency_error: float = 0.0
     notes: tuple[str, ...] = ()
+    helium: FastHelium | None = None
 
     def __post_init__(self) -> None:
         """Check shapes and make every array read-only."""

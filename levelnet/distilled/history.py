@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import dataclasses
 import math
 from collections.abc import Mapping
 from typing import NamedTuple
@@ -26,7 +27,9 @@ from ..kernels.effective import (
     effective_history,
 )
 from .fast import FastHistory, Sensitivities, fractions
-from .observables import Observables, observe_run, table_quadrature
+from .kept import check_helium, recombines
+from .observables import Observables, observe_electrons, observe_run, table_quadrature
+from .plasma import PlasmaRun, electrons_of, helium_of, run_plasma
 from .prepared import choose_physics, make_atom, rate_names, scale_factors
 from .table import EffectiveTable
 from .universe import CONSTANTS, make_drive, make_universe
@@ -124,7 +127,8 @@ def history_from_table(  # noqa: PLR0913 (each is a choice of the caller)
     -----
     The equations, the start and the step method are those of :func:`levelnet.solve`. Derivatives
     solve the variational equation along the computed history; they are no differences. Helium is
-    neutral; there is no reionization. Safe in threads.
+    neutral unless the table holds its levels; then there are no derivatives. There is no
+    reionization. Safe in threads.
 
     References
     ----------
@@ -138,6 +142,7 @@ def history_from_table(  # noqa: PLR0913 (each is a choice of the caller)
     physics = choose_physics(table, fine_structure_change, electron_mass_change)
     redshift = _redshifts(table, redshifts)
     chosen = table.setup.lines if lines is None else lines
+    check_helium(table, cosmology, chosen, physics)
     if chosen.transfer is not None:
         if sensitivities or rate_scales:
             raise InputError(
@@ -151,6 +156,14 @@ def history_from_table(  # noqa: PLR0913 (each is a choice of the caller)
     factors = scale_factors(table, rate_scales)
     atom = make_atom(table, lines, two_photon_rate_per_s, physics, factors)
     _check_range(atom, cosmology, redshift)
+    if recombines(table, cosmology):
+        if sensitivities:
+            raise InputError(
+                "sensitivities: not known for a table with levels of helium; distil without them"
+            )
+        return _with_helium(
+            table, atom, cosmology, redshift, relative, observables, scales(physics).thomson, chosen
+        )
     drive = _drive(table, cosmology, physics) if sensitivities else None
     outputs = -np.log1p(redshift)
     wanted = observables or sensitivities
@@ -166,6 +179,35 @@ def history_from_table(  # noqa: PLR0913 (each is a choice of the caller)
     names = (*COSMOLOGICAL, *CONSTANTS, *(f"ln {name}" for name in rate_names(table)))
     found = _sensitivities(cosmology, redshift, run, drive, names, slopes)
     return _assemble(cosmology, redshift, run, seen, found, left_out(chosen))
+
+
+def _with_helium(
+    table: EffectiveTable,
+    atom: Atom,
+    cosmology: Cosmology,
+    redshift: FloatArray,
+    relative: float,
+    observables: bool,
+    thomson: float,
+    lines: Lines,
+) -> FastHistory:
+    """Hydrogen and helium together."""
+    outputs = -np.log1p(redshift)
+    grid = table_quadrature(atom, cosmology, float(outputs[-1])) if observables else None
+    run = run_plasma(table, atom, cosmology, outputs, grid, relative)
+    if run.status:
+        _complain(run.status, atom, run.report)
+    seen = None
+    if grid is not None:
+        electrons = electrons_of(run.grid_state, cosmology)
+        early = 1.0 + 2.0 * cosmology.helium_ratio()
+        seen = observe_electrons(cosmology, grid, electrons, thomson, early)
+    history = _assemble(cosmology, redshift, run, seen, None, left_out(lines))
+    return dataclasses.replace(
+        history,
+        free_electron_fraction=electrons_of(run.state, cosmology),
+        helium=helium_of(run.state),
+    )
 
 
 def _redshifts(table: EffectiveTable, asked: ArrayLike | None) -> FloatArray:
@@ -263,7 +305,7 @@ def _complain(status: int, atom: Atom, report: FloatArray) -> None:
 def _assemble(
     cosmology: Cosmology,
     redshift: FloatArray,
-    run: Run,
+    run: Run | PlasmaRun,
     seen: Observables | None,
     found: Sensitivities | None,
     notes: tuple[str, ...],

@@ -4,13 +4,23 @@ from __future__ import annotations
 
 import operator
 from collections.abc import Iterable
+from typing import TYPE_CHECKING
 
+from .. import constants as const
+from ..atomic.physics import UNCHANGED, Physics, scales
+from ..background.cosmology import Cosmology
 from ..errors import InputError
 from ..escape.lines import Lines
 from ..escape.treatment import SobolevFeedback
 from ..history.atom import open_lyman_lines
 from ..history.setup import Setup
 from ..network.reduced import KeptLevels
+
+if TYPE_CHECKING:
+    from .table import EffectiveTable
+
+HELIUM_FRACTIONS = 0.1, 0.4
+"""Helium by mass in the two far cosmologies of a certificate."""
 
 KeptChoice = tuple[tuple[int, int], ...]
 
@@ -89,6 +99,72 @@ def check_lines(lines: Lines) -> None:
         )
 
 
+def recombines(table: EffectiveTable, cosmology: Cosmology) -> bool:
+    """Whether helium recombines too: the table has its levels, and there is some."""
+    return table.helium is not None and cosmology.helium_ratio() > 0.0
+
+
+def check_no_field(setup: Setup) -> None:
+    """Refuse to distil helium together with a field: no history from the table has both."""
+    if setup.helium_recombines and setup.lines.transfer is not None:
+        raise InputError(
+            'lines.hydrogen = "transfer": a table with levels of helium has no histories with a '
+            'field; allowed there are "closed", "open" and "sobolev"; levelnet solve has both'
+        )
+
+
+def check_helium(
+    table: EffectiveTable, cosmology: Cosmology, lines: Lines, physics: Physics
+) -> None:
+    """Refuse what a table with levels of helium does not hold, or its certificate not cover."""
+    if not recombines(table, cosmology):
+        if table.helium is None and lines.helium is not None:
+            raise InputError(
+                f'lines.helium = "{lines.helium}": this table holds no levels of helium; distil '
+                "the setup with helium.n_max = 2 or above"
+            )
+        return
+    there = table.setup.lines
+    for name in ("helium", "helium_higher_lines", "helium_continuum"):
+        if getattr(lines, name) != getattr(there, name):
+            raise InputError(
+                f"lines.{name}: the table was distilled with other lines of helium; distil the "
+                "setup with these"
+            )
+    if physics != Physics():
+        raise InputError(
+            "fine_structure_change, electron_mass_change: not known for levels of helium, and the "
+            "table holds them"
+        )
+    _check_two_photon(lines)
+    if lines.transfer is not None:
+        raise InputError(
+            'lines.hydrogen = "transfer": not with a table that holds levels of helium; levelnet '
+            "solve has both"
+        )
+    own, asked = (_mass_fraction(one) for one in (table.setup.cosmology, cosmology))
+    low, high = min(own, HELIUM_FRACTIONS[0]), max(own, HELIUM_FRACTIONS[1])
+    if not low * (1.0 - 1e-12) <= asked <= high * (1.0 + 1e-12):
+        raise InputError(
+            f"helium_mass_fraction = {asked:g}: the histories of this table were checked from "
+            f"{low:g} to {high:g}; allowed are these and 0"
+        )
+
+
+def _mass_fraction(cosmology: Cosmology) -> float:
+    mass = const.HELIUM_HYDROGEN_MASS_RATIO * cosmology.helium_ratio()
+    return mass / (1.0 + mass)
+
+
+def check_without_helium(table: EffectiveTable, who: str) -> None:
+    """Refuse a table with levels of helium for what knows hydrogen alone."""
+    if table.helium is not None:
+        raise InputError(
+            f"{who}: knows hydrogen alone, and this table holds levels of helium; distil the setup "
+            "with helium.n_max = 0"
+        )
+
+
 def check_without_field(lines: Lines) -> None:
     """Refuse what only a whole history can answer."""
     check_lines(lines)
@@ -107,3 +183,23 @@ def check_overrides(setup: Setup) -> None:
                 f'{one.where}: selector "{one.selector.text}": a table of effective rates holds no '
                 f"{one.selector.process} rates; such an override needs levelnet solve"
             )
+
+
+def check_helium_setup(setup: Setup) -> None:
+    """Refuse what a table holds for hydrogen alone, where helium has levels."""
+    if not setup.helium_recombines:
+        return
+    if scales(setup.physics, charge=2) != UNCHANGED:
+        raise InputError(
+            "[physics]: with levels of helium a table takes the measured constants; such a history "
+            "needs levelnet solve"
+        )
+    _check_two_photon(setup.lines)
+
+
+def _check_two_photon(lines: Lines) -> None:
+    if lines.two_photon != "spontaneous":
+        raise InputError(
+            f'lines.two_photon = "{lines.two_photon}": with levels of helium a table takes decay '
+            'by two photons as "spontaneous"; such a history needs levelnet solve'
+        )

@@ -12,6 +12,7 @@ from ..arrays import FloatArray
 from ..errors import InputError, RangeError
 from ..escape.lines import Lines
 from ..kernels.effective import Atom, local_rates, make_room
+from .kept import check_without_helium
 from .prepared import choose_physics, make_atom, rate_names, scale_factors
 from .table import COLLISIONS_K, EffectiveTable
 
@@ -106,6 +107,7 @@ def rate_of_change(  # noqa: PLR0913 (each is a condition or a choice of the cal
         radiation_temperature_k,
         hubble_rate_per_s,
     )
+    check_without_helium(table, "rate_of_change")
     _check(given, helium_ratio)
     physics = choose_physics(table, fine_structure_change, electron_mass_change)
     factors = scale_factors(table, rate_scales)

@@ -45,6 +45,19 @@ def table_quadrature(atom: Atom, cosmology: Cosmology, end: float) -> Quadrature
     return quadrature(cosmology, start + 1e-9, end)
 
 
+def observe_electrons(
+    cosmology: Cosmology,
+    grid: Quadrature,
+    electrons: FloatArray,
+    thomson: float,
+    early: float = 1.0,
+) -> Observables:
+    """z_*, r_s and k_D from n_e/n_H (dimensionless) at the points of `grid`, and `early` before."""
+    names = tuple(Observables.__slots__)
+    seen = observe(cosmology, grid, electrons, thomson, names=names, early_electron_fraction=early)
+    return Observables(*seen.value.tolist())
+
+
 def observe_run(
     cosmology: Cosmology,
     grid: Quadrature,

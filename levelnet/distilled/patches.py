@@ -3,14 +3,14 @@
 from __future__ import annotations
 
 import math
-from typing import NamedTuple
+from typing import NamedTuple, Protocol
 
 import numpy as np
 
 from ..arrays import FloatArray
 from ..errors import SolveError
 from ..network.rates import RateConstants
-from ..numerics.chebyshev import ChebyshevSeries, chebyshev_nodes
+from ..numerics.chebyshev import chebyshev_nodes
 
 # Points in a cell, off its nodes, where a patch is held against the series; ends included.
 _OFF_NODES = np.array([-1.0, -0.83, -0.43, 0.07, 0.59, 0.91, 1.0])
@@ -36,8 +36,16 @@ class Patches(NamedTuple):
     departure: FloatArray
 
 
+class Series(Protocol):
+    """What patches are fitted to."""
+
+    def evaluate(self, x: float) -> tuple[FloatArray, FloatArray]:
+        """Values and slopes at x = ln T_r."""
+        ...
+
+
 def fit_patches(
-    series: ChebyshevSeries, constants: RateConstants, ranges: Ranges, tolerance: float
+    series: Series, constants: RateConstants, ranges: Ranges, tolerance: float
 ) -> Patches:
     """Fit patches, as many as it takes for `tolerance` (absolute, in each logarithm) off the nodes.
 
@@ -71,7 +79,7 @@ def _more(count: int, error: float, tolerance: float) -> int:
 class _Source:
     """The functions to be fitted, evaluated from the series."""
 
-    def __init__(self, series: ChebyshevSeries, constants: RateConstants, ranges: Ranges) -> None:
+    def __init__(self, series: Series, constants: RateConstants, ranges: Ranges) -> None:
         self.series, self.constants, self.ranges = series, constants, ranges
         self.nodes = chebyshev_nodes(-1.0, 1.0, DEGREE + 1)
         # Values at the nodes to powers of t.

@@ -28,6 +28,8 @@ from .effective import NEVER, EffectiveRates
 
 if TYPE_CHECKING:
     from .certificate import Certificate
+    from .helium_escape import LineTable
+    from .stage import StageTable
 
 COLLISIONS_K = 8000.0
 """Matter above this and above the radiation would be ionized by collisions, which are left out."""
@@ -88,6 +90,12 @@ class EffectiveTable:
         ln of the weight of the upper level over that of the lower.
     certificate : Certificate or None
         Measured errors.
+    helium : StageTable or None
+        Effective rates of He I; None: helium is neutral and inert.
+    helium_ion : StageTable or None
+        Those of He II; None: Saha equilibrium, or no helium.
+    helium_lines : LineTable or None
+        Lines of He I to its ground state, with its rates.
     """
 
     setup: Setup
@@ -106,6 +114,9 @@ class EffectiveTable:
     rise_k: FloatArray
     log_weight_ratio: FloatArray
     certificate: Certificate | None = None
+    helium: StageTable | None = None
+    helium_ion: StageTable | None = None
+    helium_lines: LineTable | None = None
 
     def __post_init__(self) -> None:
         """Check shapes and make every array read-only."""
@@ -118,6 +129,8 @@ class EffectiveTable:
             frozen_array(self, name, (n_pairs,), np.int64)
         for name in ("barrier_k", "rise_k", "log_weight_ratio"):
             frozen_array(self, name, (n_pairs,))
+        if (self.helium is None) != (self.helium_lines is None):
+            raise ValueError("helium and helium_lines: one is of no use without the other")
 
     @property
     def scales(self) -> Scales:

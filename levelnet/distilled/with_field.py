@@ -10,7 +10,7 @@ import numpy as np
 from ..arrays import FloatArray
 from ..atomic.physics import Physics
 from ..background.cosmology import Cosmology
-from ..background.last_scattering import ionized_redshift, observe
+from ..background.last_scattering import ionized_redshift
 from ..background.quadrature import quadrature
 from ..errors import SolveError
 from ..escape.left_out import left_out
@@ -21,7 +21,7 @@ from ..history.limits import field_notes
 from ..history.setup import Accuracy, Grid, Setup
 from .fast import FastHistory, fractions
 from .kept import check_kept
-from .observables import Observables
+from .observables import Observables, observe_electrons
 from .table import EffectiveTable
 
 
@@ -122,7 +122,4 @@ def _observables(setup: Setup, course: Course, end: float) -> Observables:
     cosmology = setup.cosmology
     grid = quadrature(cosmology, -math.log1p(ionized_redshift(cosmology)), -math.log1p(end))
     electrons = electron_fraction_at(course, grid.points)
-    thomson = course.equations.scales.thomson
-    names = tuple(Observables.__slots__)
-    seen = observe(cosmology, grid, electrons, thomson, names=names)
-    return Observables(*seen.value.tolist())
+    return observe_electrons(cosmology, grid, electrons, course.equations.scales.thomson)

@@ -105,7 +105,13 @@ def _higher(setup: Setup) -> HigherLines:
     return setup.lines.helium_higher_lines or "closed"
 
 
-def build_helium(setup: Setup, hottest_k: float, tell: Tell, pieces: Pieces | None) -> HeliumAtoms:
+def build_helium(
+    setup: Setup,
+    hottest_k: float,
+    tell: Tell,
+    pieces: Pieces | None,
+    tolerance: float | None = None,
+) -> HeliumAtoms:
     """Helium of a setup, reduced from COLDEST_K up to `hottest_k`.
 
     Parameters
@@ -118,12 +124,14 @@ def build_helium(setup: Setup, hottest_k: float, tell: Tell, pieces: Pieces | No
         Progress.
     pieces : Pieces or None
         Store of reductions.
+    tolerance : float, optional
+        Largest error in the ln of any rate; None: what the setup's accuracy asks for.
     """
     treatment, factor = helium_treatment(setup), scales(setup.physics, charge=2)
     # Of the atom with the measured constants.
     hottest_k /= factor.energy
     top_k = max(_HOTTEST_K, 2.0 ** (math.ceil(4.0 * math.log2(hottest_k)) / 4.0))
-    tolerance = table_tolerance(setup)
+    tolerance = tolerance or table_tolerance(setup)
     tell("helium", 0.0)
     changed = setup.rates.network_of("He I")
     terms = kept_terms(setup.helium.n_max, _higher(setup))

@@ -1,6 +1,9 @@
 """The one decorator for compiled kernels."""
 
+import hashlib
+import os
 from collections.abc import Callable
+from pathlib import Path
 from typing import Any, TypeVar, cast
 
 import numba
@@ -8,17 +11,43 @@ import numba
 Function = TypeVar("Function", bound=Callable[..., Any])
 
 
+def _folder_name() -> str:
+    """Name of a cache folder for these texts of the kernel files: they may use each other."""
+    text = hashlib.sha256()
+    for path in sorted(Path(__file__).parent.glob("*.py")):
+        text.update(path.read_bytes())
+    return f"levelnet-{text.hexdigest()[:16]}"
+
+
+# numba fills in its options as it starts.
+_options: Any = numba.config
+_FOLDER = os.path.join(_options.CACHE_DIR or Path(__file__).parent / "__pycache__", _folder_name())
+
+
 def kernel(function: Function) -> Function:
     """Compile `function` with numba at its first call, and keep the machine code on disk.
 
-    A kernel calls only kernels of its own file and takes every physical constant as an argument:
-    the cache on disk notices changes in the kernel's own file and no others.
+    A kernel calls only kernels, of its own file or of another, and takes every physical constant as
+    an argument: numba itself notices changes in a kernel's own file and no others, so that the
+    folder on disk is named by the text of all of them.
     """
+    # numba chooses the folder here; where it cannot be written it takes one of its own.
+    own, _options.CACHE_DIR = _options.CACHE_DIR, _FOLDER
     try:
         return _compiled(function, cache=True)
     except RuntimeError:
         # Neither the package folder nor the user's cache folder can be written: compile each time.
         return _compiled(function, cache=False)
+    finally:
+        _options.CACHE_DIR = own
+
+
+def inlined(function: Function) -> Function:
+    """Make `function` part of every kernel that calls it, for small steps of many arguments.
+
+    A call hands every array over as seven numbers; that costs as much as a few hundred operations.
+    """
+    return cast(Function, numba.njit(inline="always", error_model="numpy")(function))
 
 
 def _compiled(function: Function, cache: bool) -> Function:

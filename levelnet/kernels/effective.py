@@ -11,7 +11,7 @@ from typing import NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
-from .compile import kernel
+from .compile import inlined, kernel
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
@@ -21,12 +21,17 @@ LOG_CAPTURE, SLOPE_RADIATION, SLOPE_MATTER, LOG_PHOTO, SLOPE_PHOTO = 0, 1, 2, 3,
 CAPTURE, LIFT, PHOTO, LOSS, LOSS_COLUMN, LOSS_TEMPERATURE = 5, 6, 7, 8, 9, 10
 LOSS_STRUCTURE, LOSS_MASS, SOURCE, DEPARTURE = 11, 12, 13, 14
 FATE, IONIZED, LOSS_FOLDED, PHOTO_FOLDED, EXIT = 15, 16, 17, 18, 19
-N_VECTORS = 20
+# What a level takes from the ground state beyond equilibrium; not 0 in lines of helium alone.
+EXCESS = 20
+N_VECTORS = 21
 
 # Elements of `Room.slope`: derivatives of the net flow by the logarithm named; ln of the scale
 # factor on each recombination (with its inverse), each exchange and the two-photon rate follow.
 BY_RADIATION, BY_MATTER, BY_DENSITY, BY_HUBBLE, BY_ELECTRONS, BY_IONIZED, BY_GROUND = range(7)
 BY_STRUCTURE, BY_MASS, BY_SCALES = 7, 8, 9
+
+# ln of the slowest rate in s^-1 that is told from 0.
+_SLOWEST = -300.0
 
 # Columns of `Universe.drive`.
 DRIVE_TEMPERATURE, DRIVE_DENSITY, DRIVE_HELIUM, DRIVE_STRUCTURE, DRIVE_MASS = 0, 1, 2, 3, 4
@@ -127,7 +132,7 @@ class Universe(NamedTuple):
 
 
 class Room(NamedTuple):
-    """Working arrays: vector (20, n_kept), matrix (3, n_kept, n_kept), slope, linear (2, 3)."""
+    """Working arrays: vector (21, n_kept), matrix (3, n_kept, n_kept), slope, linear (2, 3)."""
 
     vector: FloatArray
     matrix: FloatArray
@@ -146,7 +151,7 @@ def make_room(n_kept: int, n_pairs: int) -> Room:
     )
 
 
-@kernel
+@inlined
 def _patch(series: FloatArray, t: float) -> tuple[float, float]:
     """Value and derivative by t of a power series."""
     value, slope = series[-1], 0.0
@@ -156,7 +161,7 @@ def _patch(series: FloatArray, t: float) -> tuple[float, float]:
     return value, slope
 
 
-@kernel
+@inlined
 def _value(series: FloatArray, t: float) -> float:
     """Value of a power series."""
     value = float(series[-1])
@@ -165,7 +170,7 @@ def _value(series: FloatArray, t: float) -> float:
     return value
 
 
-@kernel
+@inlined
 def _value_two(series: FloatArray, t: float, w: float) -> float:
     """Value of a double power series in t (first index) and w."""
     value = 0.0
@@ -174,7 +179,7 @@ def _value_two(series: FloatArray, t: float, w: float) -> float:
     return value
 
 
-@kernel
+@inlined
 def _patch_two(series: FloatArray, t: float, w: float) -> tuple[float, float, float]:
     """Value and derivatives by t (first index) and w of a double power series."""
     value = by_t = by_w = 0.0
@@ -189,7 +194,7 @@ def _patch_two(series: FloatArray, t: float, w: float) -> tuple[float, float, fl
     return value, by_t, by_w
 
 
-@kernel
+@inlined
 def _cell(x: float, low: float, high: float, count: int) -> tuple[int, float, float]:
     """Cell of x, place in it on [-1, 1], and d place/d x."""
     per = count / (high - low)
@@ -198,8 +203,14 @@ def _cell(x: float, low: float, high: float, count: int) -> tuple[int, float, fl
     return cell, 2.0 * (at - cell) - 1.0, 2.0 * per
 
 
-@kernel
-def _read_table(atom: Atom, x: float, inverse: float, y: float, room: Room, slopes: bool) -> None:
+@inlined
+def _rate(log_rate: float) -> float:
+    """Rate from its ln; 0 long before products of rates are so small that arithmetic is slow."""
+    return math.exp(log_rate) if log_rate > _SLOWEST else 0.0
+
+
+@inlined
+def read_table(atom: Atom, x: float, inverse: float, y: float, room: Room, slopes: bool) -> None:
     """Rates and slopes at ln T' = x, 1/T' = inverse and ln(T_m/T_r) = y into `room`."""
     vector, matrix = room.vector, room.matrix
     n_kept = vector.shape[1]
@@ -220,7 +231,7 @@ def _read_table(atom: Atom, x: float, inverse: float, y: float, room: Room, slop
         base += atom.scale[i]
         vector[LOG_CAPTURE, i] = base + y * h + atom.constants[2]
         vector[LOG_PHOTO, i] = base - (atom.level[2, i] - 1.5 * x + reach) + atom.constants[3]
-        vector[PHOTO, i] = math.exp(vector[LOG_PHOTO, i])
+        vector[PHOTO, i] = _rate(vector[LOG_PHOTO, i])
         matrix[0, i, i] = matrix[1, i, i] = 0.0
     for k in range(atom.lower.shape[0]):
         i, j = atom.lower[k], atom.upper[k]
@@ -232,11 +243,11 @@ def _read_table(atom: Atom, x: float, inverse: float, y: float, room: Room, slop
         else:
             down = _value(atom.exchange[cell, k], t)
         down += atom.scale[n_kept + k] + atom.constants[3] - barrier
-        matrix[0, j, i] = math.exp(down)
-        matrix[0, i, j] = math.exp(down + atom.pair[2, k] - rise)
+        matrix[0, j, i] = _rate(down)
+        matrix[0, i, j] = _rate(down + atom.pair[2, k] - rise)
 
 
-@kernel
+@inlined
 def _couple(atom: Atom, x: float, inverse: float, column: float, room: Room) -> None:
     """Loss of each kept level to the ground state; column = n_1s/H in s/cm^3."""
     vector = room.vector
@@ -278,7 +289,7 @@ def _couple(atom: Atom, x: float, inverse: float, column: float, room: Room) -> 
     room.slope[-1] = rate
 
 
-@kernel
+@inlined
 def _eliminate(room: Room) -> None:
     """Fates of an atom in each kept level, by elimination without a single subtraction.
 
@@ -331,13 +342,39 @@ def net_flow(
     The arguments are T_r in K, ln(T_m/T_r), n_H in cm^-3, H in s^-1, and n_e, n_HII and n_1s over
     n_H.
     """
+    return stage_flow(
+        atom, radiation_k, ratio, density, hubble, electrons, ions, ground, room, slopes
+    )
+
+
+@inlined
+def stage_flow(
+    atom: Atom,
+    radiation_k: float,
+    ratio: float,
+    density: float,
+    hubble: float,
+    electrons: float,
+    ions: float,
+    ground: float,
+    room: Room,
+    slopes: bool,
+) -> float:
+    """As :func:`net_flow`, of any stage: nuclei, ions and ground states are those of its own."""
     x = math.log(radiation_k) - atom.constants[1]
     inverse = math.exp(atom.constants[1]) / radiation_k
-    _read_table(atom, x, inverse, ratio, room, slopes)
+    read_table(atom, x, inverse, ratio, room, slopes)
     _couple(atom, x, inverse, density * ground / hubble, room)
+    return solve_kept(atom, inverse, density * electrons * ions, ground, room, slopes)
+
+
+@inlined
+def solve_kept(
+    atom: Atom, inverse: float, pairs: float, ground: float, room: Room, slopes: bool
+) -> float:
+    """Net flow from the rates and losses in `room`; pairs = n_e n_ion over the nuclei, cm^-3."""
     _eliminate(room)
     vector = room.vector
-    pairs = density * electrons * ions
     log_ratio = math.log(ground / pairs)
     flow = 0.0
     for i in range(vector.shape[1]):
@@ -347,20 +384,20 @@ def net_flow(
         vector[CAPTURE, i] = capture
         vector[LIFT, i] = capture * (1.0 + excess)
         vector[SOURCE, i] = -capture * excess
-        flow += vector[FATE, i] * vector[SOURCE, i]
+        flow += vector[FATE, i] * vector[SOURCE, i] - vector[IONIZED, i] * vector[EXCESS, i]
     if slopes:
-        _depart(room)
+        depart(room)
         _differentiate(atom, inverse, room)
     return flow
 
 
-@kernel
-def _depart(room: Room) -> None:
+@inlined
+def depart(room: Room) -> None:
     """Departures of the kept levels from Boltzmann equilibrium with the ground state."""
     vector, folded = room.vector, room.matrix[2]
     n = vector.shape[1]
     for i in range(n):
-        vector[DEPARTURE, i] = vector[SOURCE, i]
+        vector[DEPARTURE, i] = vector[SOURCE, i] + vector[EXCESS, i]
     for m in range(n - 1, 0, -1):
         share = vector[DEPARTURE, m] / vector[EXIT, m]
         for i in range(m):
@@ -372,7 +409,7 @@ def _depart(room: Room) -> None:
         vector[DEPARTURE, m] = total / vector[EXIT, m]
 
 
-@kernel
+@inlined
 def _differentiate(atom: Atom, inverse: float, room: Room) -> None:
     """Derivatives of the net flow, as `flow_slopes` in levelnet/network/gradient.py, and more."""
     vector, rate, rate_slope, slope = room.vector, room.matrix[0], room.matrix[1], room.slope
@@ -423,7 +460,7 @@ def _differentiate(atom: Atom, inverse: float, room: Room) -> None:
 
 
 @kernel
-def _fractions(odds: float) -> tuple[float, float]:
+def split_odds(odds: float) -> tuple[float, float]:
     """Ionized and neutral fraction from u, each to full precision."""
     small = math.exp(-abs(odds))
     if odds > 0.0:
@@ -432,7 +469,7 @@ def _fractions(odds: float) -> tuple[float, float]:
 
 
 @kernel
-def _log_hubble(universe: Universe, s: float) -> tuple[float, float]:
+def hubble_at(universe: Universe, s: float) -> tuple[float, float]:
     """Interpolate ln H and its slope by s: cubic Hermite."""
     nodes = universe.log_hubble
     step = universe.today[4]
@@ -452,8 +489,8 @@ def rate_of_slow(
     atom: Atom, universe: Universe, s: float, u: float, v: float, room: Room
 ) -> tuple[float, float]:
     """(du/ds, dv/ds) of u = ln(x_HII/x_HI) and v = ln(T_m/T_r) at s = ln a."""
-    ions, ground = _fractions(u)
-    log_hubble, _ = _log_hubble(universe, s)
+    ions, ground = split_odds(u)
+    log_hubble, _ = hubble_at(universe, s)
     hubble = math.exp(log_hubble)
     growth = math.exp(-s)
     radiation_k = universe.today[5] * growth
@@ -469,8 +506,8 @@ def linearize(
     atom: Atom, universe: Universe, s: float, u: float, v: float, room: Room, push: FloatArray
 ) -> tuple[float, float]:
     """(du/ds, dv/ds); derivatives by u, v, s into ``room.linear``, by parameters into `push`."""
-    ions, ground = _fractions(u)
-    log_hubble, hubble_slope = _log_hubble(universe, s)
+    ions, ground = split_odds(u)
+    log_hubble, hubble_slope = hubble_at(universe, s)
     hubble = math.exp(log_hubble)
     growth = math.exp(-s)
     radiation_k = universe.today[5] * growth
@@ -738,7 +775,7 @@ def _newton_at(
 
 
 @kernel
-def _solve_many(matrix: FloatArray, right: FloatArray) -> None:
+def solve_many(matrix: FloatArray, right: FloatArray) -> None:
     """Gaussian elimination with row pivoting, in place; `right` has a column per system."""
     n, columns = matrix.shape[0], right.shape[1]
     for k in range(n):
@@ -806,14 +843,14 @@ def _sensitivities(
                         matrix[2 * i + a, 2 * j + b] = same - weight * room.linear[a, b]
                     for p in range(n_parameters):
                         right[2 * i + a, p] += weight * push[a, p]
-        _solve_many(matrix, right)
+        solve_many(matrix, right)
         for p in range(n_parameters):
             found[k + 1, p] = right[4, p]
             found[k + 1, n_parameters + p] = right[5, p]
 
 
 @kernel
-def _interpolate(
+def interpolate(
     times: FloatArray, values: FloatArray, outputs: FloatArray, skip: int, out: FloatArray
 ) -> None:
     """Values at ascending outputs from number `skip` on, by local polynomials of degree 5."""
@@ -900,15 +937,15 @@ def effective_history(
     if status != DONE or count == 1:
         return status
     times, points = times[:count], points[:count]
-    _interpolate(times, points, outputs, above, states)
-    _interpolate(times, points, grid, grid_above, grid_states)
+    interpolate(times, points, outputs, above, states)
+    interpolate(times, points, grid, grid_above, grid_states)
     if n_parameters > 0:
         found = np.empty((count, 2 * n_parameters))
         for p in range(n_parameters):
             found[0, p], found[0, n_parameters + p] = push[0, p], push[1, p]
         _sensitivities(atom, universe, times, points, found, room)
-        _interpolate(times, found, outputs, above, slopes)
-        _interpolate(times, found, grid, grid_above, grid_slopes)
+        interpolate(times, found, outputs, above, slopes)
+        interpolate(times, found, grid, grid_above, grid_slopes)
     return status
 
 

@@ -175,15 +175,17 @@ def _levels_of(species: str, given: dict[str, Any]) -> LevelSet | HeliumLevels:
 
 def distilled_of(content: Content) -> FastHistory:
     """Make the history that :func:`levelnet.store.write.write_distilled` took apart."""
-    from ..distilled.fast import FastHistory
+    from ..distilled.fast import FastHelium, FastHistory
     from ..distilled.observables import Observables
 
     parts = all_fields(content, DISTILLED_LAYOUT)
     seen, field = parts.pop("observables", None), parts.pop("field", None)
+    helium = parts.pop("helium", None)
     return FastHistory(
         outcome=outcome_of(content),
         observables=None if seen is None else Observables(**seen),
         field=None if field is None else RadiationField(**field),
+        helium=None if helium is None else FastHelium(**helium),
         **parts,
     )
 
@@ -191,6 +193,8 @@ def distilled_of(content: Content) -> FastHistory:
 def table_of(content: Content) -> EffectiveTable:
     """Make the table that :func:`levelnet.store.write.content_of` took apart."""
     from ..distilled.certificate import Certificate
+    from ..distilled.helium_escape import LineTable
+    from ..distilled.stage import StageTable
     from ..distilled.table import EffectiveTable
     from ..network.reduced import KeptLevels
 
@@ -198,11 +202,15 @@ def table_of(content: Content) -> EffectiveTable:
     kept = KeptLevels(**parts.pop("kept"))
     if parts["equilibrium"].shape[1] != len(kept):
         raise FileFormatError("levels: their number differs from that of the table")
-    certificate = parts.pop("certificate", None)
+    certificate, lines = parts.pop("certificate", None), parts.pop("helium_lines", None)
+    helium, ion = parts.pop("helium", None), parts.pop("helium_ion", None)
     return EffectiveTable(
         setup=parse_setup(str(content.attributes["setup"]), "stored setup"),
         kept=kept,
         certificate=None if certificate is None else Certificate(**certificate),
+        helium=None if helium is None else StageTable(**helium),
+        helium_ion=None if ion is None else StageTable(**ion),
+        helium_lines=None if lines is None else LineTable(**lines),
         **parts,
     )
 

@@ -6,6 +6,7 @@ See :mod:`levelnet.store.layout`.
 from __future__ import annotations
 
 from . import layout
+from .helium_table_layout import HELIUM, HELIUM_HISTORY, HELIUM_ION, HELIUM_LINES
 from .schema import Group, Kind, Layout, Variable, describe
 
 
@@ -141,7 +142,7 @@ TABLE_LAYOUT = Layout(
     "a table of effective rates",
     _ATTRIBUTES,
     (TABLE, LEVELS, PAIRS),
-    (CERTIFICATE,),
+    (CERTIFICATE, HELIUM, HELIUM_ION, HELIUM_LINES),
 )
 
 
@@ -194,7 +195,7 @@ DISTILLED_LAYOUT = Layout(
     "a distilled history",
     layout.ROOT_ATTRIBUTES,
     (DISTILLED, RUN, layout.NOTES),
-    (OBSERVABLES, layout.FIELD),
+    (OBSERVABLES, layout.FIELD, HELIUM_HISTORY),
 )
 
 

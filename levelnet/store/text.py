@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+from operator import attrgetter
 from pathlib import Path
 from typing import TYPE_CHECKING, TextIO
 
@@ -12,6 +13,7 @@ from ..arrays import FloatArray
 from ..constants import CODATA_EDITION
 from ..history.result import History
 from ..history.setup import Setup
+from .helium_table_layout import HELIUM_HISTORY
 from .layout import HISTORY
 from .provenance import levelnet_version
 from .schema import Variable
@@ -83,7 +85,10 @@ def write_distilled_csv(
         f"outcome: {history.outcome.name}: {history.outcome.value}",
         f"{len(history.redshift)} rows, redshift descending; numbers with 17 significant digits",
     ]
-    _put(_table(about, history, DISTILLED.variables, False), path_or_stream, force)
+    variables = DISTILLED.variables
+    if history.helium is not None:
+        variables += tuple(one for one in HELIUM_HISTORY.variables if one.field != "redshift")
+    _put(_table(about, history, variables, False), path_or_stream, force)
 
 
 def _put(text: str, path_or_stream: str | Path | TextIO, force: bool) -> None:
@@ -105,7 +110,7 @@ def _table(
     variables: tuple[Variable, ...],
     ascending: bool,
 ) -> str:
-    columns = {one.name: getattr(history, one.field) for one in variables}
+    columns = {one.name: attrgetter(one.field)(history) for one in variables}
     comments = [
         *about,
         *_column_lines(variables),

@@ -179,7 +179,7 @@ def test_expansion_between_nodes() -> None:
     for cosmology in (COSMOLOGY, massive):
         universe = make_universe(cosmology, -8.2, -2.0)
         for s in np.random.default_rng(3).uniform(-8.2, -2.0, 200).tolist():
-            value, slope = effective._log_hubble(universe, s)
+            value, slope = effective.hubble_at(universe, s)
             z = math.expm1(-s)
             assert value == pytest.approx(math.log(cosmology.hubble_rate_per_s(z)), abs=1e-10)
             assert slope == pytest.approx(-cosmology.hubble_log_slope(z), abs=1e-7)

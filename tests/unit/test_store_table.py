@@ -87,7 +87,11 @@ def test_file_holds_what_its_layout_says(stored: Path) -> None:
         assert file.attrs["layout"] == "levelnet effective rates"
         assert file.attrs["layout_version"] == 1
         assert set(file.attrs) == set(TABLE_LAYOUT.attributes)
-        for group in (*TABLE_LAYOUT.required, *TABLE_LAYOUT.optional):
+        for group in TABLE_LAYOUT.optional:
+            assert f"group {group.name}:" in text
+        certificate = TABLE_LAYOUT.optional[0]
+        assert set(file) == {one.name for one in (*TABLE_LAYOUT.required, certificate)}
+        for group in (*TABLE_LAYOUT.required, certificate):
             assert f"group {group.name}:" in text
             assert set(file[group.name]) == {one.name for one in group.variables}
             for one in group.variables:

@@ -11,7 +11,6 @@ from scipy import constants as si
 from scipy.integrate import solve_ivp
 
 import levelnet
-from levelnet.distilled.build import distill
 from levelnet.errors import InputError, Outcome
 from levelnet.history.course import electron_fraction_at, state_at
 from levelnet.history.integrate import integrate_history
@@ -320,12 +319,6 @@ def test_wrong_setup_is_one_line(parts: dict[str, dict[str, object]], text: str)
 def test_helium_above_one_is_refused() -> None:
     with pytest.raises(InputError, match=r"helium_mass_fraction = 1.2"):
         levelnet.Cosmology(68.0, 0.0224, 0.142, helium_mass_fraction=1.2)
-
-
-def test_users_that_know_hydrogen_alone_say_so() -> None:
-    setup = helium_setup()
-    with pytest.raises(InputError, match=r"helium.n_max = 5: a distilled table knows"):
-        distill(setup)
 
 
 def test_every_output_was_delivered() -> None:
