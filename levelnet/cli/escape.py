@@ -8,18 +8,18 @@ import time
 from pathlib import Path
 from typing import TYPE_CHECKING
 
+from ..studies.answers import escape_answer
 from .console import Console
 from .distill import worker_count, worker_processes
 from .escape_output import escape_summary, escape_values
 from .output import print_result
 from .paths import check_folder, check_target
 from .solve import cache_pieces
-from .study import WITHIN, add_files, add_question, add_running, asked_range, asked_requirement
+from .study import add_files, add_question, add_running, asked_range, asked_requirement
 
 if TYPE_CHECKING:
     from ..history.setup import Setup
     from ..studies.escape_records import EscapeStudy
-    from ..studies.escape_verdict import EscapeDemands, EscapeVerdict
     from ..studies.level_records import Question
     from ..studies.requirement import Requirement
 
@@ -64,7 +64,7 @@ def run(options: argparse.Namespace, console: Console) -> int:
     study = _study(setup, order, requirement, question, options, console)
     seconds = time.monotonic() - start
     study = dataclasses.replace(study, question=question)
-    found, met = judged(study)
+    found, met = escape_answer(study)
 
     from ..store import write
 
@@ -121,21 +121,6 @@ def _study(
             pieces=pieces,
             progress=progress,
         )
-
-
-def judged(study: EscapeStudy) -> tuple[EscapeVerdict, EscapeDemands | None]:
-    """Answer what the study was asked; if nothing was, the usual on as much as it covers."""
-    from ..studies.escape_notes import asked_range
-    from ..studies.escape_verdict import escape_demands, escape_verdict
-    from ..studies.requirement import parse_requirement
-
-    asked = study.question
-    within = WITHIN if asked is None else asked.within
-    found = escape_verdict(study, within, *asked_range(study))
-    if asked is None or not asked.requirement:
-        return found, None
-    requirement = parse_requirement("\n".join(asked.requirement), "requirement", None)
-    return found, escape_demands(study, requirement)
 
 
 def save_figures(

@@ -7,7 +7,7 @@ import math
 from typing import TYPE_CHECKING, Any
 
 from ..quantities import OBSERVABLES
-from .output import aligned, nearest_rows, plain_values, row
+from .output import aligned, plain_values, row
 
 if TYPE_CHECKING:
     from ..studies.level_records import LevelStudy
@@ -160,6 +160,8 @@ def _rung_lines(study: LevelStudy, found: Verdict) -> list[str]:
 
 
 def _limit_lines(study: LevelStudy) -> list[str]:
+    from ..history.samples import sample_rows
+
     limit, longest = study.limit.free_electron_fraction, study.rungs.n_max[-1]
     last = study.rungs.free_electron_fraction[-1]
     head = ("z", "x_e, all levels", "error bar", f"x_e({longest})/x_e - 1", "exponent")
@@ -171,7 +173,7 @@ def _limit_lines(study: LevelStudy) -> list[str]:
             f"{last[k] / limit.value[k] - 1.0:+.2e}",
             f"{limit.exponent[k]:.2f}" if limit.fitted[k] else "no law",
         )
-        for k in nearest_rows(study.redshift)
+        for k in sample_rows(study.redshift)
     ]
     return aligned([head, *body], right=True)
 

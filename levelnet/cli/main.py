@@ -15,7 +15,7 @@ from typing import NoReturn
 
 from .. import __version__
 from ..errors import InputError, LevelnetError
-from . import demo, distill, escape, history, levels, show, solve, tables, weigh
+from . import demo, distill, escape, history, levels, report, show, solve, tables, weigh
 from .console import Console, one_line
 
 # Input was good, but the disk was not: a failure and no bad input.
@@ -33,6 +33,7 @@ Ionization history and level populations of hydrogen through cosmological recomb
   levelnet history setup-table.h5    make a history from them in milliseconds
   levelnet levels setup.toml         find out how many levels matter
   levelnet escape setup.toml         find out which treatment of the Lyman lines is good enough
+  levelnet report setup.h5           set results out as one HTML page
 """
 _EXIT_CODES = (
     "exit codes: 0 ok; 1 computed but not to the tolerance, or failed; 2 bad usage or input; "
@@ -59,7 +60,7 @@ def build_parser() -> argparse.ArgumentParser:
     )
     parser.add_argument("--version", action="version", version=f"levelnet {__version__}")
     commands = parser.add_subparsers(metavar="COMMAND", parser_class=_Parser)
-    for module in (solve, show, levels, escape, weigh, distill, history, tables, demo):
+    for module in (solve, show, levels, escape, weigh, distill, history, report, tables, demo):
         command = commands.add_parser(
             module.NAME,
             help=module.SUMMARY,

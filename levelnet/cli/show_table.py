@@ -7,6 +7,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING
 
 from ..errors import InputError
+from ..studies.answers import escape_answer, level_answer
 from . import escape, levels
 from .console import Console
 from .distill import check_exports, write_exports
@@ -28,7 +29,7 @@ def show_levels(
     """Print the summary of a study and draw it where that was asked for."""
     _refuse_all(options, "a study of levels")
     written = levels.save_figures(study, folder, options.force, console)
-    found, met = levels.judged(study)
+    found, met = level_answer(study)
     print_result(
         options.json,
         lambda: level_values(study, found, met),
@@ -44,7 +45,7 @@ def show_escape(
     """Print the summary of a study of the escape and draw it where that was asked for."""
     _refuse_all(options, "a study of the escape")
     written = escape.save_figures(study, folder, options.force, console)
-    found, met = escape.judged(study)
+    found, met = escape_answer(study)
     print_result(
         options.json,
         lambda: escape_values(study, found, met),

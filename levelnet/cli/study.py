@@ -6,12 +6,11 @@ import argparse
 from pathlib import Path
 from typing import TYPE_CHECKING
 
+from ..studies.answers import WITHIN
+
 if TYPE_CHECKING:
     from ..history.setup import Setup
     from ..studies.requirement import Requirement
-
-WITHIN = 1e-3
-"""Relative error of x_e that a verdict allows where nothing else is asked."""
 
 
 def add_files(parser: argparse.ArgumentParser, ending: str) -> None:

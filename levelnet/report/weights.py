@@ -88,13 +88,18 @@ def save_weighing_figures(
         If a file exists and `force` is not set, or `folder` is a file.
     """
     check_place(folder, figure_paths(weighing.targets, _has_band(weighing), folder), force)
+    return save_drawn(make_weighing_figures(weighing), folder, progress)
+
+
+def make_weighing_figures(weighing: Weighing) -> dict[str, Figure]:
+    """Every figure of a weighing by its name: a map and a ranking of each target, and the band."""
     figures: dict[str, Figure] = {}
     for target, name in zip(weighing.targets, file_names(weighing.targets), strict=True):
         figures[f"map-{name}"] = importance_figure(weighing, target, target_label(target))
         figures[f"ranking-{name}"] = ranking_figure(weighing, target)
     if weighing.budget is not None and _has_band(weighing):
         figures["error-band"] = band_figure(weighing.budget)
-    return save_drawn(figures, folder, progress)
+    return figures
 
 
 def figure_paths(targets: Sequence[str], band: bool, folder: str | Path) -> tuple[Path, ...]:

@@ -4,7 +4,7 @@ from .escape_layout import ESCAPE_LAYOUT, describe_escape_layout
 from .exports import export_paths, write_export
 from .layout import LAYOUT_NAME, LAYOUT_VERSION, describe_layout
 from .level_layout import LEVEL_LAYOUT, describe_level_layout
-from .read import read, read_attributes, read_table
+from .read import read, read_attributes, read_table, read_with_attributes
 from .table_layout import DISTILLED_LAYOUT, TABLE_LAYOUT, describe_table_layout
 from .text import write_csv, write_distilled_csv
 from .weighing_layout import WEIGHING_LAYOUT, describe_weighing_layout
@@ -29,6 +29,7 @@ __all__ = [
     "read",
     "read_attributes",
     "read_table",
+    "read_with_attributes",
     "whole_file",
     "write",
     "write_csv",
