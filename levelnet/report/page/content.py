@@ -136,7 +136,7 @@ class Chapter:
     name : str
         Unique on the page.
     title : str
-        What the user called it, or what it is.
+        What the user called it; may be empty.
     what : str
         What kind of result it is.
     file : str

@@ -28,7 +28,9 @@ from .drawing import picture
 from .wording import (
     asked_section,
     observable_label,
+    one_line,
     origin_section,
+    short_name,
     signed_percent,
     trust_section,
 )
@@ -54,10 +56,11 @@ def escape_chapter(study: EscapeStudy, origin: Origin, prefix: str) -> Chapter:
         ("reference", study.variants.name[study.reference]),
         ("error of x_e allowed", f"{found.within:g} at {found.low:g} <= z <= {found.high:g}"),
     )
-    said = [*verdict_texts(study, found), *(() if met is None else (demands_text(met),))]
+    # How far each treatment is off stands in the tables; first comes what is enough.
+    said = [verdict_texts(study, found)[-1], *(() if met is None else (demands_text(met),))]
     return Chapter(
         name=prefix,
-        title=" ".join(study.setup.title.split()) or "Which treatment of the Lyman lines",
+        title=one_line(study.setup.title),
         what="Treatments of the Lyman lines against the field resolved in frequency",
         file=origin.name,
         ok=study.outcome.ok,
@@ -80,7 +83,10 @@ def _found(
     if met is not None:
         head = (
             "variant",
-            *(f"{one.name}, at most {one.limit:g} {one.unit}" for one in met.findings[0]),
+            *(
+                f"{short_name(one.name)}, at most {one.limit:g} {one.unit}"
+                for one in met.findings[0]
+            ),
         )
         rows = tuple(
             (name, *(f"{one.error:.1e} {'ok' if one.passed else 'no'}" for one in line))

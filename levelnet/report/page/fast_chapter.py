@@ -8,7 +8,14 @@ from ...history.setup import Setup
 from ..plots import history_figure
 from .content import Block, Chapter, Facts, Origin, Picture, Section, Table
 from .drawing import picture
-from .wording import asked_section, number, observable_label, origin_section, trust_section
+from .wording import (
+    asked_section,
+    number,
+    observable_label,
+    one_line,
+    origin_section,
+    trust_section,
+)
 
 
 def fast_chapter(history: FastHistory, setup: Setup, origin: Origin, prefix: str) -> Chapter:
@@ -71,7 +78,7 @@ def fast_chapter(history: FastHistory, setup: Setup, origin: Origin, prefix: str
     )
     return Chapter(
         name=prefix,
-        title=" ".join(setup.title.split()) or "Ionization history from effective rates",
+        title=one_line(setup.title),
         what="Ionization history from a table of effective rates",
         file=origin.name,
         ok=history.outcome.ok,

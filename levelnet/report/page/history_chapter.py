@@ -15,6 +15,7 @@ from .drawing import picture
 from .wording import (
     asked_section,
     number,
+    one_line,
     origin_section,
     trust_section,
 )
@@ -46,7 +47,7 @@ def history_chapter(history: History, origin: Origin, prefix: str) -> Chapter:
     setup = history.setup
     return Chapter(
         name=prefix,
-        title=" ".join(setup.title.split()) or "Ionization history",
+        title=one_line(setup.title),
         what="Ionization history with level populations",
         file=origin.name,
         ok=history.outcome.ok,

@@ -19,7 +19,9 @@ from .drawing import picture
 from .wording import (
     asked_section,
     observable_label,
+    one_line,
     origin_section,
+    short_name,
     signed_percent,
     trust_section,
     unit_text,
@@ -46,7 +48,7 @@ def levels_chapter(study: LevelStudy, origin: Origin, prefix: str) -> Chapter:
     )
     return Chapter(
         name=prefix,
-        title=" ".join(study.setup.title.split()) or "How many levels matter",
+        title=one_line(study.setup.title),
         what="How many levels matter: a ladder of n_max",
         file=origin.name,
         ok=study.outcome.ok,
@@ -140,7 +142,10 @@ def _observables(study: LevelStudy) -> Table:
 
 def _demands(study: LevelStudy, met: Demands) -> Table:
     names = met.longer
-    head = ("n_max", *(f"{one.name}, at most {one.limit:g} {one.unit}" for one in names))
+    head = (
+        "n_max",
+        *(f"{short_name(one.name)}, at most {one.limit:g} {one.unit}" for one in names),
+    )
     rows = tuple(
         (str(n), *(f"{one.error:.1e} {'ok' if one.passed else 'no'}" for one in line))
         for n, line in zip(study.rungs.n_max.tolist(), met.rungs, strict=True)

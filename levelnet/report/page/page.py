@@ -73,8 +73,19 @@ def html_page(
         chapters.append(_chapter(record, setup, origin, f"r{k + 1}"))
         works += works_of(record, setup)
         tables += tables_read(setup)
-    heading = title or (chapters[0].title if len(chapters) == 1 else f"{len(chapters)} results")
-    return page_text(heading, chapters, citing_section([one for _, one in results], works, tables))
+    return page_text(
+        title or _title(chapters),
+        chapters,
+        citing_section([one for _, one in results], works, tables),
+    )
+
+
+def _title(chapters: Sequence[Chapter]) -> str:
+    """What all results are called; else what the only one is, or how many there are."""
+    titles = {one.title for one in chapters}
+    if len(titles) == 1 and "" not in titles:
+        return titles.pop()
+    return chapters[0].what if len(chapters) == 1 else f"{len(chapters)} results"
 
 
 def _setup_of(record: object, origin: Origin) -> Setup:

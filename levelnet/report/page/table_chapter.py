@@ -12,7 +12,7 @@ from ...distilled.table import EffectiveTable
 from ..rates import certificate_figure, rate_figure
 from .content import Block, Chapter, Facts, Origin, Picture, Section, Table
 from .drawing import picture
-from .wording import asked_section, origin_section, trust_section
+from .wording import asked_section, one_line, origin_section, trust_section
 
 _SAMPLES_K = (9000.0, 6000.0, 4000.0, 3000.0, 2000.0, 1000.0, 300.0, 100.0, 30.0)
 _LEVELS = 3  # whose rates are listed
@@ -44,7 +44,7 @@ def table_chapter(table: EffectiveTable, origin: Origin, prefix: str) -> Chapter
         notes.insert(0, f"warning: {_UNMEASURED}")
     return Chapter(
         name=prefix,
-        title=" ".join(setup.title.split()) or "Table of effective rates",
+        title=one_line(setup.title),
         what="Table of effective rates"
         + (" without a certificate" if proof is None else " with a certificate of its errors"),
         file=origin.name,
@@ -155,6 +155,5 @@ def _errors(proof: Certificate) -> tuple[Block, ...]:
             "Largest relative error of x_e(z) against the full network",
             ("cosmology", "error"),
             histories,
-            numeric=False,
         ),
     )

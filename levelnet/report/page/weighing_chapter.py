@@ -2,15 +2,21 @@
 
 from __future__ import annotations
 
-import math
-
 from ...studies.budget_record import ErrorBudget
 from ...studies.groups import by_level, top_transitions
 from ...studies.weighing import Weighing
 from ..weights import file_names, make_weighing_figures
 from .content import Block, Chapter, Facts, Origin, Picture, Section, Table
 from .drawing import picture
-from .wording import asked_section, number, origin_section, trust_section, unit_text
+from .wording import (
+    asked_section,
+    number,
+    one_line,
+    origin_section,
+    short_name,
+    trust_section,
+    unit_text,
+)
 
 _TOP = 10
 _SMALLEST = 1e-3  # part of the whole error below which a group is not listed
@@ -39,7 +45,7 @@ def weighing_chapter(weighing: Weighing, origin: Origin, prefix: str) -> Chapter
     )
     return Chapter(
         name=prefix,
-        title=" ".join(weighing.setup.title.split()) or "Which rates the answer hangs on",
+        title=one_line(weighing.setup.title),
         what="Weighing: derivatives by the logarithm of every rate",
         file=origin.name,
         ok=weighing.outcome.ok,
@@ -63,7 +69,7 @@ def _value(weighing: Weighing, target: str) -> str:
 def _answer(weighing: Weighing, target: str) -> str:
     weights = weighing.processes(target)
     first = max(weights, key=lambda name: abs(weights[name]))
-    text = f"{target} = {_value(weighing, target)}"
+    text = f"{short_name(target)} = {_value(weighing, target)}"
     if weighing.budget is not None:
         sigma = float(weighing.budget.sigma[weighing.budget.targets.index(target)])
         text += f", with {100.0 * sigma:.2g} % (1 sigma) left by uncertain rates"
@@ -72,6 +78,7 @@ def _answer(weighing: Weighing, target: str) -> str:
 
 def _found(weighing: Weighing) -> tuple[Block, ...]:
     targets = weighing.targets
+    heads = [short_name(target) for target in targets]
     values = Facts(tuple((target, _value(weighing, target)) for target in targets))
     columns = [weighing.processes(target) for target in targets]
     processes = tuple((name, *(f"{one[name]:+.4g}" for one in columns)) for name in columns[0])
@@ -81,11 +88,11 @@ def _found(weighing: Weighing) -> tuple[Block, ...]:
     )
     blocks: list[Block] = [
         values,
-        Table("By a common factor on each process", ("process", *targets), processes),
+        Table("By a common factor on each process", ("process", *heads), processes),
     ]
     if parameters:
         caption = "By each parameter of the cosmology"
-        blocks.append(Table(caption, ("parameter", *targets), parameters))
+        blocks.append(Table(caption, ("parameter", *heads), parameters))
     return (*blocks, *(_ranked(weighing, target) for target in targets))
 
 
@@ -143,26 +150,22 @@ def _budget(weighing: Weighing) -> tuple[Block, ...]:
     budget = weighing.budget
     if budget is None:
         return ()
-    rows = []
-    sources = {}
-    for target in weighing.targets:
-        sigma = float(budget.sigma[budget.targets.index(target)])
-        rows.append((target, "all", f"{100.0 * sigma:.3g} %"))
-        for one in budget.ranked(target):
-            if math.isfinite(one.contribution) and abs(one.contribution) > _SMALLEST * sigma:
-                rows.append((target, one.group, f"{100.0 * one.contribution:+.3g} %"))
-                sources[one.group] = one.source
+    targets = weighing.targets
+    sigma = {one: float(budget.sigma[budget.targets.index(one)]) for one in targets}
+    ranked = {one: {part.group: part for part in budget.ranked(one)} for one in targets}
+    listed = [
+        group
+        for group in ranked[targets[0]]
+        if any(abs(ranked[one][group].contribution) > _SMALLEST * sigma[one] for one in targets)
+    ]
+    rows = [("all", *(f"{100.0 * sigma[one]:.3g} %" for one in targets))]
+    rows += [
+        (group, *(f"{100.0 * ranked[one][group].contribution:+.3g} %" for one in targets))
+        for group in listed
+    ]
+    sources = tuple((group, ranked[targets[0]][group].source) for group in listed)
+    caption = "Error budget: change of each target where the rates of a group are 1 sigma higher"
     return (
-        Table(
-            "Error budget: relative change of each target where the rates of a group are 1 sigma "
-            "higher",
-            ("target", "group", "change"),
-            tuple(rows),
-        ),
-        Table(
-            "Where the uncertainties come from",
-            ("group", "source"),
-            tuple(sources.items()),
-            numeric=False,
-        ),
+        Table(caption, ("group", *(short_name(one) for one in targets)), tuple(rows)),
+        Table("Where the uncertainties come from", ("group", "source"), sources, numeric=False),
     )

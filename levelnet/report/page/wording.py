@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 import math
+import re
+import textwrap
 
 from ...background.parameters import helium_mass_fraction
 from ...history.setup import Setup
@@ -10,7 +12,14 @@ from ...quantities import OBSERVABLES
 from .content import Block, Facts, Listing, Origin, Section, Statements
 
 _LIBRARIES = ("numpy", "scipy", "numba", "h5py")
+_NUMBERS = re.compile(r"\[\n((?:    [-+.0-9e]+,\n)+)\]")  # an array, a number a line
+_WIDTH = 88
 _LONGEST_SETUP = 8000  # characters: an expansion table may stand inside
+
+
+def one_line(text: str) -> str:
+    """Fold a text that a user wrote into one line."""
+    return " ".join(text.split())
 
 
 def number(value: float, form: str = ".6g", unit: str = "") -> str:
@@ -36,7 +45,7 @@ def observable_label(name: str) -> str:
 
 
 def asked_section(prefix: str, setup: Setup, more: tuple[tuple[str, str], ...] = ()) -> Section:
-    """What was asked: the choices that decide most, then the whole setup.
+    """What was asked: the choices that decide most.
 
     Parameters
     ----------
@@ -63,11 +72,7 @@ def asked_section(prefix: str, setup: Setup, more: tuple[tuple[str, str], ...] =
         ("accuracy", f"{setup.accuracy.relative:g} (relative)"),
         ("setup digest", setup.digest),
     ]
-    text = setup.to_toml()
-    if len(text) > _LONGEST_SETUP:
-        text = f"{text[:_LONGEST_SETUP]}\n# cut here; the result file holds all of it"
-    listing = Listing("The whole setup as TOML, defaults included", text.rstrip("\n"))
-    return Section(f"{prefix}-asked", "What was asked", (Facts((*rows, *more)), listing))
+    return Section(f"{prefix}-asked", "What was asked", (Facts((*rows, *more)),))
 
 
 def _atom(setup: Setup) -> str:
@@ -85,7 +90,7 @@ def _helium(setup: Setup) -> str:
 
 def trust_section(prefix: str, blocks: tuple[Block, ...], notes: tuple[str, ...]) -> Section:
     """How far to trust it: warnings and notes first, then the figures behind them."""
-    said = Statements(tuple(" ".join(one.split()) for one in notes))
+    said = Statements(tuple(one_line(one) for one in notes))
     return Section(f"{prefix}-trust", "How far to trust it", (said, *blocks))
 
 
@@ -100,8 +105,26 @@ def origin_section(prefix: str, origin: Origin) -> Section:
         ("setup digest", origin.text("setup_digest")),
         ("digest of the content", origin.text("digest")),
     ]
+    text = _NUMBERS.sub(_wrapped, origin.text("setup"))
+    if len(text) > _LONGEST_SETUP:
+        text = f"{text[:_LONGEST_SETUP]}\n# cut here; the result file holds all of it"
+    whole = Listing("The whole setup as TOML, defaults included", text.rstrip("\n"))
     checksums = Listing(
         "Atomic tables shipped with that version, and their sha256",
         origin.text("table_checksums"),
     )
-    return Section(f"{prefix}-origin", "Where it comes from", (Facts(tuple(rows)), checksums))
+    return Section(
+        f"{prefix}-origin", "Where it comes from", (Facts(tuple(rows)), whole, checksums)
+    )
+
+
+def _wrapped(array: re.Match[str]) -> str:
+    """Several numbers of an array of TOML in each line, so that a long list reads as one."""
+    numbers = " ".join(array[1].split()).removesuffix(",")
+    filled = textwrap.fill(numbers, _WIDTH, initial_indent="    ", subsequent_indent="    ")
+    return f"[\n{filled},\n]"
+
+
+def short_name(target: str) -> str:
+    """Head of a column of a target."""
+    return OBSERVABLES[target].short if target in OBSERVABLES else target
