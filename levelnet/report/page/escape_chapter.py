@@ -27,10 +27,10 @@ from .content import Block, Chapter, Facts, Origin, Picture, Section, Table
 from .drawing import picture
 from .wording import (
     asked_section,
+    limit_text,
     observable_label,
     one_line,
     origin_section,
-    short_name,
     signed_percent,
     trust_section,
 )
@@ -81,13 +81,7 @@ def _found(
 ) -> tuple[Block, ...]:
     blocks: list[Block] = [_differences(study, found), _effects(study, found), _shares(study)]
     if met is not None:
-        head = (
-            "variant",
-            *(
-                f"{short_name(one.name)}, at most {one.limit:g} {one.unit}"
-                for one in met.findings[0]
-            ),
-        )
+        head = ("variant", *(limit_text(one) for one in met.findings[0]))
         rows = tuple(
             (name, *(f"{one.error:.1e} {'ok' if one.passed else 'no'}" for one in line))
             for name, line in zip(met.candidates, met.findings, strict=True)

@@ -18,10 +18,10 @@ from .content import Block, Chapter, Facts, Origin, Picture, Section, Table
 from .drawing import picture
 from .wording import (
     asked_section,
+    limit_text,
     observable_label,
     one_line,
     origin_section,
-    short_name,
     signed_percent,
     trust_section,
     unit_text,
@@ -141,11 +141,7 @@ def _observables(study: LevelStudy) -> Table:
 
 
 def _demands(study: LevelStudy, met: Demands) -> Table:
-    names = met.longer
-    head = (
-        "n_max",
-        *(f"{short_name(one.name)}, at most {one.limit:g} {one.unit}" for one in names),
-    )
+    head = ("n_max", *(limit_text(one) for one in met.longer))
     rows = tuple(
         (str(n), *(f"{one.error:.1e} {'ok' if one.passed else 'no'}" for one in line))
         for n, line in zip(study.rungs.n_max.tolist(), met.rungs, strict=True)

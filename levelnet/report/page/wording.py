@@ -9,6 +9,7 @@ import textwrap
 from ...background.parameters import helium_mass_fraction
 from ...history.setup import Setup
 from ...quantities import OBSERVABLES
+from ...studies.requirement import Finding
 from .content import Block, Facts, Listing, Origin, Section, Statements
 
 _LIBRARIES = ("numpy", "scipy", "numba", "h5py")
@@ -128,3 +129,8 @@ def _wrapped(array: re.Match[str]) -> str:
 def short_name(target: str) -> str:
     """Head of a column of a target."""
     return OBSERVABLES[target].short if target in OBSERVABLES else target
+
+
+def limit_text(one: Finding) -> str:
+    """Head of a column of a demand."""
+    return f"{short_name(one.name)}, at most {one.limit:g} {one.unit}"
