@@ -35,6 +35,7 @@ if TYPE_CHECKING:
     from .history.result import History
     from .history.run import solve
     from .history.setup import Setup, load_setup
+    from .report.plot import plot
     from .store.read import read
     from .store.write import write
     from .studies.escape import escape_study
@@ -76,6 +77,7 @@ _HOMES = {
     "lyman_resonances": "atomic.second_order",
     "photoionization_cross_section": "atomic.bound_free",
     "photoionization_rate": "atomic.bound_free",
+    "plot": "report.plot",
     "raman_spectrum_per_s_hz": "atomic.second_order",
     "rate_of_change": "distilled.local",
     "read": "store.read",
@@ -121,6 +123,7 @@ __all__ = [
     "lyman_resonances",
     "photoionization_cross_section",
     "photoionization_rate",
+    "plot",
     "raman_spectrum_per_s_hz",
     "rate_of_change",
     "read",

@@ -32,19 +32,24 @@ def make_figures(history: History, redshift: float | None = None) -> dict[str, F
     redshift : float or None, dimensionless
         The output nearest to it is drawn as the map; None takes the visibility peak.
     """
-    made = (
-        history_figure(history),
-        departure_map_figure(history, redshift),
-        departure_curves_figure(history),
-        channel_figure(history),
-        visibility_figure(history),
+    return {name: make() for name, make in figure_makers(history, redshift).items()}
+
+
+def figure_makers(
+    history: History, redshift: float | None = None
+) -> dict[str, Callable[[], Figure]]:
+    """What makes each figure of :func:`make_figures`, by its name."""
+    makers: tuple[Callable[[], Figure], ...] = (
+        lambda: history_figure(history),
+        lambda: departure_map_figure(history, redshift),
+        lambda: departure_curves_figure(history),
+        lambda: channel_figure(history),
+        lambda: visibility_figure(history),
     )
-    figures = dict(zip(FIGURE_NAMES, made, strict=True))
-    return (
-        figures
-        if history.field is None
-        else figures | {FIELD_FIGURE_NAME: spectrum_figure(history)}
-    )
+    named = dict(zip(FIGURE_NAMES, makers, strict=True))
+    if history.field is not None:
+        named[FIELD_FIGURE_NAME] = lambda: spectrum_figure(history)
+    return named
 
 
 def figure_paths(folder: str | Path, with_field: bool = False) -> tuple[Path, ...]:

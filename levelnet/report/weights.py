@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import re
 from collections.abc import Callable, Sequence
+from functools import partial
 from pathlib import Path
 from typing import TYPE_CHECKING
 
@@ -93,13 +94,18 @@ def save_weighing_figures(
 
 def make_weighing_figures(weighing: Weighing) -> dict[str, Figure]:
     """Every figure of a weighing by its name: a map and a ranking of each target, and the band."""
-    figures: dict[str, Figure] = {}
+    return {name: make() for name, make in weighing_makers(weighing).items()}
+
+
+def weighing_makers(weighing: Weighing) -> dict[str, Callable[[], Figure]]:
+    """What makes each figure of :func:`make_weighing_figures`, by its name."""
+    makers: dict[str, Callable[[], Figure]] = {}
     for target, name in zip(weighing.targets, file_names(weighing.targets), strict=True):
-        figures[f"map-{name}"] = importance_figure(weighing, target, target_label(target))
-        figures[f"ranking-{name}"] = ranking_figure(weighing, target)
+        makers[f"map-{name}"] = partial(importance_figure, weighing, target, target_label(target))
+        makers[f"ranking-{name}"] = partial(ranking_figure, weighing, target)
     if weighing.budget is not None and _has_band(weighing):
-        figures["error-band"] = band_figure(weighing.budget)
-    return figures
+        makers["error-band"] = partial(band_figure, weighing.budget)
+    return makers
 
 
 def figure_paths(targets: Sequence[str], band: bool, folder: str | Path) -> tuple[Path, ...]:
