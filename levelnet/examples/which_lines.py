@@ -15,7 +15,7 @@ setup = levelnet.Setup(
     ),
     hydrogen={"n_max": 4},
     grid={"redshift_start": 1600.0, "redshift_end": 600.0, "n_redshifts": 20},
-    lines={"hydrogen": "transfer", "lyman_lines": 3, "transfer": {"frequency_step": 2e-3}},
+    lines={"hydrogen": "transfer", "lyman_lines": 3, "transfer": {"frequency_step": 1e-3}},
     accuracy={"relative": 1e-4},
 )
 

@@ -1,4 +1,4 @@
-"""Results in a notebook: small tables, xarray, figures, progress, and the examples as they stand."""
+"""Results in a notebook: small tables, xarray, figures, progress, and the examples."""
 
 from __future__ import annotations
 
