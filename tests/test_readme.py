@@ -182,6 +182,13 @@ def test_python_example_runs(first_example: dict[str, Any]) -> None:
     assert repr(first_example["again"]) == repr(first_example["history"])
 
 
+def test_notebook_example_runs(
+    first_example: dict[str, Any], capsys: pytest.CaptureFixture[str]
+) -> None:
+    run_example(dict(first_example), "levelnet.plot(history)")
+    assert "%" in capsys.readouterr().out
+
+
 def test_error_budget_example_runs(first_example: dict[str, Any]) -> None:
     names = dict(first_example)
     run_example(names, "from levelnet.studies.budget import")

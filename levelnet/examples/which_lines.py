@@ -24,11 +24,11 @@ study = levelnet.escape_study(setup)
 print(study)
 study
 
-# %% What is enough?
-from levelnet.studies.answers import escape_answer
+# %% What is enough for one per cent?
 from levelnet.studies.escape_notes import verdict_texts
+from levelnet.studies.escape_verdict import escape_verdict
 
-found, _ = escape_answer(study)
+found = escape_verdict(study, within=1e-2, low=600.0, high=1600.0)
 print("\n".join(verdict_texts(study, found)))
 
 # %% What is behind it; what the study holds is also an xarray Dataset (study.to_xarray())
