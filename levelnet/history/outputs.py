@@ -52,6 +52,7 @@ from .setup import Setup
 from .validity import Steps, line_figures, steps_of
 
 _SMALLEST_LOG = math.log(1e-300)
+_HELIUM = ("neutral", "singly_ionized", "doubly_ionized")
 
 
 class _Output(NamedTuple):
@@ -80,12 +81,9 @@ def assemble_history(setup: Setup, integrated: Integrated, tell: Progress) -> Hi
     slowest = min([*every, *(one.relaxation_hubble for one in moments)], default=math.inf)
     outcome = outcome_of(setup, integrated, [slowest])
     conditions = [o.local.conditions for o in outputs]
-    electron_fraction = np.array([c.electron_fraction for c in conditions])
-    hydrogen_cm3 = np.array([c.hydrogen_density_cm3 for c in conditions])
-    depth, visibility, marks = _seen(integrated, redshift, hydrogen_cm3 * electron_fraction)
-    ionized = np.array([c.ionized_fraction for c in conditions])
-    ground = np.array([c.ground_fraction for c in conditions])
-    helium = _helium_fractions(moments, len(redshift))
+    arrays, marks = history_arrays(setup, integrated, redshift, conditions, moments)
+    electron_fraction = arrays["free_electron_fraction"]
+    ground = arrays["neutral_hydrogen_fraction"]
     steps = steps_of(integrated)
     figures = line_figures(
         integrated, steps, redshift, [o.local for o in outputs], [o.lost_per_s for o in outputs]
@@ -98,36 +96,66 @@ def assemble_history(setup: Setup, integrated: Integrated, tell: Progress) -> Hi
     figures_of_helium, atoms = None, integrated.helium
     if atoms is not None:
         species += helium_species(atoms, setup.cosmology.helium_ratio(), moments)
-        closure = closure_error(
-            integrated.equations, electron_fraction, np.array([ground, ionized]), helium
-        )
+        hydrogen = np.array([ground, arrays["ionized_hydrogen_fraction"]])
+        helium = np.array([arrays[f"{name}_helium_fraction"] for name in _HELIUM])
+        closure = closure_error(integrated.equations, electron_fraction, hydrogen, helium)
         figures_of_helium = helium_figures(integrated, atoms, moments, closure)
     return History(
         setup,
         outcome,
         redshift,
-        electron_fraction,
-        ionized,
-        ground,
-        helium[0],
-        helium[1],
-        helium[2],
-        np.array([c.matter_temperature_k for c in conditions]),
-        np.array([c.radiation_temperature_k for c in conditions]),
-        hydrogen_cm3,
-        np.array([c.hubble_rate_per_s for c in conditions]),
-        setup.cosmology.cosmic_time_s(redshift),
-        depth,
-        visibility,
-        species,
-        channels(integrated, steps, redshift, np.array([o.local.solution.flow for o in outputs])),
-        figures,
-        marks,
-        _diagnostics(integrated, outputs, slowest),
-        notes_of(setup, chosen, warnings),
-        None if integrated.field is None else integrated.field.field,
-        figures_of_helium,
+        **arrays,
+        species=species,
+        channels=channels(
+            integrated, steps, redshift, np.array([o.local.solution.flow for o in outputs])
+        ),
+        lines=figures,
+        milestones=marks,
+        diagnostics=_diagnostics(integrated, outputs, slowest),
+        notes=notes_of(setup, chosen, warnings),
+        field=None if integrated.field is None else integrated.field.field,
+        helium=figures_of_helium,
     )
+
+
+def history_arrays(
+    setup: Setup,
+    integrated: Integrated,
+    redshift: FloatArray,
+    conditions: list[Conditions],
+    moments: list[HeliumMoment],
+) -> tuple[dict[str, FloatArray], Milestones]:
+    """All arrays of a history over redshift, by their names there, and its milestones.
+
+    Parameters
+    ----------
+    setup, integrated
+        The run.
+    redshift : ndarray, shape (n_redshift,), dimensionless
+        Outputs that were reached.
+    conditions : list of Conditions, length n_redshift
+        At these.
+    moments : list of HeliumMoment
+        Helium at these; empty where it is inert.
+    """
+    electron_fraction = np.array([c.electron_fraction for c in conditions])
+    hydrogen_cm3 = np.array([c.hydrogen_density_cm3 for c in conditions])
+    depth, visibility, marks = _seen(integrated, redshift, hydrogen_cm3 * electron_fraction)
+    helium = _helium_fractions(moments, len(redshift))
+    arrays = {
+        "free_electron_fraction": electron_fraction,
+        "ionized_hydrogen_fraction": np.array([c.ionized_fraction for c in conditions]),
+        "neutral_hydrogen_fraction": np.array([c.ground_fraction for c in conditions]),
+        **{f"{name}_helium_fraction": helium[k] for k, name in enumerate(_HELIUM)},
+        "matter_temperature_k": np.array([c.matter_temperature_k for c in conditions]),
+        "radiation_temperature_k": np.array([c.radiation_temperature_k for c in conditions]),
+        "hydrogen_density_cm3": hydrogen_cm3,
+        "hubble_rate_per_s": np.array([c.hubble_rate_per_s for c in conditions]),
+        "cosmic_time_s": np.asarray(setup.cosmology.cosmic_time_s(redshift)),
+        "optical_depth": depth,
+        "visibility": visibility,
+    }
+    return arrays, marks
 
 
 def _helium_fractions(moments: list[HeliumMoment], count: int) -> FloatArray:
