@@ -14,7 +14,7 @@ from ..errors import InputError
 from ..history.cost import estimate
 from ..history.integrate import Progress
 from ..history.setup import Setup
-from ..pieces import MemoryPieces, Pieces
+from ..pieces import MemoryPieces, Pieces, array_text
 from ..quantities import OBSERVABLES, at_redshift
 from .jobs import run_each
 from .sweep_cases import Cases
@@ -35,13 +35,13 @@ class Progressed(NamedTuple):
         Cases that were there already.
     computed : int
         Cases computed now; the same setup counts once.
-    not_ok : tuple of int
-        Positions of cases whose results may not be used as they stand.
+    not_ok : dict of int to str
+        Positions of cases whose results may not be used as they stand, and why not.
     """
 
     found: int
     computed: int
-    not_ok: tuple[int, ...]
+    not_ok: dict[int, str]
 
 
 def sweep(
@@ -132,10 +132,10 @@ def compute_missing(
     results = {key: unpacked(finished.get(key)) for key in wanted}
     # One that failed for want of memory, say, is tried again.
     missing = [key for key, one in results.items() if one is None or not one.lasting]
-    good = {key: one.ok for key, one in results.items() if one is not None}
+    reasons = {key: one.reason for key, one in results.items() if one is not None}
     task = partial(compute_case, pieces=pieces, optical_depth_to=optical_depth_to)
     setups = [cases.setups[wanted[key]] for key in missing]
-    costs = [estimate(one).seconds for one in setups]
+    costs = [estimate(one, populations=0).seconds for one in setups]
     done = 0.0
     for round_ in _rounds(setups, shared=pieces is not None):
         jobs = [setups[k] for k in round_]
@@ -143,10 +143,10 @@ def compute_missing(
             k = round_[position]
             piece = found if isinstance(found, dict) else packed(_lost(found))
             finished.put(missing[k], piece)
-            good[missing[k]] = bool((one := unpacked(piece)) and one.ok)
+            reasons[missing[k]] = array_text(piece["reason"])
             done += costs[k]
             tell("cases", done / sum(costs))
-    bad = tuple(k for k, key in keys.items() if not good[key])
+    bad = {k: reasons[key] for k, key in keys.items() if reasons[key]}
     return Progressed(len(wanted) - len(missing), len(missing), bad)
 
 
@@ -157,12 +157,17 @@ def _rounds(setups: Sequence[Setup], shared: bool) -> list[list[int]]:
     """
     if not shared:
         return [list(range(len(setups)))]
+    leaders = first_of_each_atom(setups)
+    others = sorted(set(range(len(setups))) - set(leaders))
+    return [leaders, others]
+
+
+def first_of_each_atom(setups: Sequence[Setup]) -> list[int]:
+    """Positions of setups whose reduced network no earlier one has made."""
     first: dict[object, int] = {}
     for k, one in enumerate(setups):
         first.setdefault((one.hydrogen, one.helium, one.lines, one.rates.rows), k)
-    leaders = sorted(first.values())
-    others = sorted(set(range(len(setups))) - set(leaders))
-    return [leaders, others]
+    return sorted(first.values())
 
 
 def _lost(error: Exception) -> CaseResult:

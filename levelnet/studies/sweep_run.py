@@ -99,7 +99,7 @@ def compute_case(
         A piece; :func:`unpacked` makes a :class:`CaseResult` of it.
     """
     try:
-        check_memory(setup)
+        check_memory(setup, populations=0)
     except InputError as error:
         return packed(failure(str(error), lasting=False))
     try:
