@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 from collections.abc import Callable
 from dataclasses import replace
+from functools import partial
 from typing import NamedTuple
 
 import numpy as np
@@ -26,6 +27,7 @@ from ..network.assembly import (
 from ..network.populations import LevelPopulations, populations
 from ..network.tabulation import TabulatedReduction
 from ..numerics.stepping import Trajectory
+from ..pieces import Pieces
 from .course import electron_fraction_at, state_at
 from .equations import ionized_and_neutral
 from .helium_outputs import (
@@ -36,6 +38,7 @@ from .helium_outputs import (
     helium_species,
 )
 from .integrate import Integrated, Progress
+from .level_pieces import KeptLevels, LevelsAt
 from .limits import field_notes, limit_notes
 from .local import Local
 from .notes import notes_of
@@ -64,7 +67,9 @@ class _Output(NamedTuple):
     relaxation_hubble: float
 
 
-def assemble_history(setup: Setup, integrated: Integrated, tell: Progress) -> History:
+def assemble_history(
+    setup: Setup, integrated: Integrated, tell: Progress, pieces: Pieces | None = None
+) -> History:
     """Work out all that was asked from the slow variables, and what to know about it.
 
     Where the integration ended early the history ends there, with the outcome saying why.
@@ -75,7 +80,8 @@ def assemble_history(setup: Setup, integrated: Integrated, tell: Progress) -> Hi
     redshift = integrated.redshift[reached]
     if not len(redshift):
         raise SolveError(trajectory.outcome.value, outcome=trajectory.outcome)
-    outputs = _outputs(integrated, redshift, tell)
+    kept = KeptLevels(setup, len(redshift), pieces)
+    outputs = _outputs(integrated, redshift, kept, tell)
     moments = helium_moments(integrated, redshift)
     every = [one.relaxation_hubble for one in outputs]
     slowest = min([*every, *(one.relaxation_hubble for one in moments)], default=math.inf)
@@ -165,26 +171,44 @@ def _helium_fractions(moments: list[HeliumMoment], count: int) -> FloatArray:
     return np.array([np.ones(count), np.zeros(count), np.zeros(count)])
 
 
-def _outputs(integrated: Integrated, redshift: FloatArray, tell: Progress) -> list[_Output]:
+def _outputs(
+    integrated: Integrated, redshift: FloatArray, kept: KeptLevels, tell: Progress
+) -> list[_Output]:
     work = Workspace.of(integrated.ladder)
     found = []
     for k, z in enumerate(redshift.tolist()):
-        local, factored, levels = solve_levels(integrated, z, work)
-        relaxation = relaxation_hubble(local)
-        found.append(_Output(local, levels, _lost_per_s(factored), relaxation))
+        local = local_at(integrated, z)
+        levels, lost_per_s = kept.at(z, partial(_levels_at, integrated, local, work))
+        found.append(_Output(local, levels, lost_per_s, relaxation_hubble(local)))
         tell("level populations", (k + 1) / len(redshift))
     return found
+
+
+def _levels_at(integrated: Integrated, local: Local, work: Workspace) -> LevelsAt:
+    factored, levels = _solved(integrated, local, work)
+    return LevelsAt(levels, _lost_per_s(factored))
+
+
+def local_at(integrated: Integrated, redshift: float) -> Local:
+    """Kept levels at one output redshift."""
+    log_scale = -math.log1p(redshift)
+    return integrated.equations.local(log_scale, state_at(integrated, log_scale))
 
 
 def solve_levels(
     integrated: Integrated, redshift: float, work: Workspace
 ) -> tuple[Local, FactoredInterior, LevelPopulations]:
     """Kept levels, factored interior and populations of every level at one output redshift."""
-    equations, log_scale = integrated.equations, -math.log1p(redshift)
-    local = equations.local(log_scale, state_at(integrated, log_scale))
-    measured = _as_measured(local.conditions, equations.scales)
+    local = local_at(integrated, redshift)
+    return local, *_solved(integrated, local, work)
+
+
+def _solved(
+    integrated: Integrated, local: Local, work: Workspace
+) -> tuple[FactoredInterior, LevelPopulations]:
+    measured = _as_measured(local.conditions, integrated.equations.scales)
     factored = factor_interior(integrated.ladder, measured.radiation_temperature_k, work)
-    return local, factored, populations(factored, local.solution.log_population, measured)
+    return factored, populations(factored, local.solution.log_population, measured)
 
 
 def _as_measured(conditions: Conditions, factor: Scales) -> Conditions:

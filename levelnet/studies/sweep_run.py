@@ -7,8 +7,6 @@ died) is computed again by a rerun; one that follows from the setup alone is not
 
 from __future__ import annotations
 
-import dataclasses
-import math
 from collections.abc import Mapping
 from dataclasses import dataclass
 
@@ -17,26 +15,21 @@ import numpy as np
 from ..arrays import FloatArray
 from ..errors import InputError, Outcome, SolveError
 from ..history.cost import check_memory
-from ..history.course import state_at
 from ..history.helium_outputs import helium_moments
-from ..history.integrate import Integrated
-from ..history.local import Local
+from ..history.level_pieces import setup_key
 from ..history.outcome import outcome_of, relaxation_hubble
-from ..history.outputs import history_arrays
+from ..history.outputs import history_arrays, local_at
 from ..history.setup import Setup
 from ..numerics.threads import one_blas_thread
-from ..pieces import Pieces, array_text, code_digest, content_key, text_array
-from ..tables import list_tables
+from ..pieces import Pieces, array_text, code_digest, text_array
 from .rung import integrate_observed, observed
 
 FAILED = "FAILED"
 """Outcome of a case that gave no history for a reason that is no :class:`Outcome`."""
 
-# All that a history depends on besides its setup.
-_CODE = (
-    *("constants", "quantities", "tables", "kernels", "numerics", "atomic", "background"),
-    *("network", "escape", "history", "studies/rung", "studies/sweep_run"),
-)
+
+# Code of this layer that a case depends on besides that of a history.
+_CODE = ("studies/rung", "studies/sweep_run")
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -72,11 +65,7 @@ class CaseResult:
 
 def case_key(setup: Setup, optical_depth_to: tuple[float, ...] = ()) -> str:
     """Content name of a case: the setup, its title aside, and the code and tables behind it."""
-    plain = dataclasses.replace(setup, title="")
-    tables = [one.sha256 for one in list_tables()]
-    return content_key(
-        "case of a sweep", code_digest(_CODE), *tables, plain.to_toml(), optical_depth_to
-    )
+    return setup_key("case of a sweep", setup, code_digest(_CODE), optical_depth_to)
 
 
 def compute_case(
@@ -126,7 +115,7 @@ def _computed(setup: Setup, pieces: Pieces | None, depths: tuple[float, ...]) ->
     if not outcome.ok:
         return failure(outcome.value, lasting=True, outcome=outcome.name)
     redshift = integrated.redshift
-    here = [_local(integrated, z) for z in redshift.tolist()]
+    here = [local_at(integrated, z) for z in redshift.tolist()]
     moments = helium_moments(integrated, redshift)
     slowest = [*map(relaxation_hubble, here), *(one.relaxation_hubble for one in moments)]
     outcome = outcome_of(setup, integrated, slowest)
@@ -139,11 +128,6 @@ def _computed(setup: Setup, pieces: Pieces | None, depths: tuple[float, ...]) ->
         {"redshift": redshift, **arrays},
         observed(setup, integrated, depths).value,
     )
-
-
-def _local(integrated: Integrated, redshift: float) -> Local:
-    log_scale = -math.log1p(redshift)
-    return integrated.equations.local(log_scale, state_at(integrated, log_scale))
 
 
 def packed(result: CaseResult) -> dict[str, FloatArray]:
