@@ -91,6 +91,8 @@ def sweep(
     A case is integrated from where hydrogen is ionized, as in the studies, so that all observables
     are there: x_e differs from that of :func:`levelnet.solve` by less than the tolerance asked.
     """
+    if not len(cases):
+        raise InputError("no cases to compute")
     kept = MemoryPieces() if finished is None else finished
     depths = tuple(float(z) for z in optical_depth_to)
     compute_missing(
