@@ -15,6 +15,7 @@ from .distill import worker_count, worker_processes
 from .level_output import level_summary, level_values
 from .output import print_result, size_text, time_text
 from .paths import check_folder, check_target
+from .plan import print_plan
 from .solve import cache_pieces
 from .study import add_files, add_question, add_running, asked_range, asked_requirement
 
@@ -67,6 +68,12 @@ def run(options: argparse.Namespace, console: Console) -> int:
     asked = () if requirement is None else tuple(requirement.to_toml().splitlines())
     question = Question(options.within, *asked_range(setup, options), asked)
     ladder = _checked_ladder(setup, rungs, resolve, options)
+    if options.plan:
+        from ..studies.plans import plan_levels
+
+        ends = question.low, question.high
+        plan = plan_levels(setup, ladder, resolve, ends, worker_count(options.workers))
+        return print_plan(plan, options.json)
     start = time.monotonic()
     study = _study(setup, ladder, resolve, requirement, question, options, console)
     seconds = time.monotonic() - start
