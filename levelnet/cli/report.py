@@ -62,7 +62,7 @@ def run(options: argparse.Namespace, console: Console) -> int:
             {
                 "file": path,
                 "kind": origin.text("layout"),
-                "setup_digest": origin.text("setup_digest"),
+                "setup_digest": origin.attributes.get("setup_digest"),
             }
             for path, (_, origin) in zip(options.files, results, strict=True)
         ],

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from functools import partial
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 from ..distilled.fast import FastHistory
 from ..distilled.table import EffectiveTable
@@ -13,6 +13,7 @@ from ..history.result import History
 from ..studies.escape_records import EscapeStudy
 from ..studies.level_records import LevelStudy
 from ..studies.levels import n_held_out
+from ..studies.sweep_record import Sweep
 from ..studies.weighing import Weighing
 from .escape import (
     escape_channel_figure,
@@ -25,6 +26,7 @@ from .level_checks import check_figure, resolve_figure
 from .levels import level_figure
 from .plots import history_figure
 from .rates import certificate_figure, rate_figure
+from .sweep import sweep_figure
 from .weights import weighing_makers
 
 if TYPE_CHECKING:
@@ -38,7 +40,7 @@ def plot(result: object, name: str = "") -> Figure:
 
     Parameters
     ----------
-    result : History, FastHistory, LevelStudy, EscapeStudy, EffectiveTable or Weighing
+    result : History, FastHistory, LevelStudy, EscapeStudy, EffectiveTable, Weighing or Sweep
         Any result.
     name : str
         Which figure; empty takes the first. A name that is not known is answered with those that
@@ -63,19 +65,10 @@ def plot(result: object, name: str = "") -> Figure:
 
 def makers_of(result: object) -> Makers:
     """What draws each figure of a result, by its name."""
-    if isinstance(result, History):
-        return figure_makers(result)
-    if isinstance(result, FastHistory):
-        return {"history": partial(history_figure, result)}
-    if isinstance(result, LevelStudy):
-        return _of_levels(result)
-    if isinstance(result, EscapeStudy):
-        return _of_escape(result)
-    if isinstance(result, EffectiveTable):
-        return _of_table(result)
-    if isinstance(result, Weighing):
-        return weighing_makers(result)
-    raise InputError(f"plot: nothing is drawn of a {type(result).__name__}")
+    known = _MAKERS.get(type(result))
+    if known is None:
+        raise InputError(f"plot: nothing is drawn of a {type(result).__name__}")
+    return known(result)
 
 
 def _of_levels(study: LevelStudy) -> Makers:
@@ -103,3 +96,14 @@ def _of_table(table: EffectiveTable) -> Makers:
     if table.certificate is not None:
         makers["certificate"] = partial(certificate_figure, table.certificate, table.tolerance)
     return makers
+
+
+_MAKERS: dict[type, Callable[[Any], Makers]] = {
+    History: figure_makers,
+    FastHistory: lambda history: {"history": partial(history_figure, history)},
+    LevelStudy: _of_levels,
+    EscapeStudy: _of_escape,
+    EffectiveTable: _of_table,
+    Weighing: weighing_makers,
+    Sweep: lambda sweep: {"sweep": partial(sweep_figure, sweep)},
+}

@@ -9,11 +9,13 @@ import numpy as np
 
 from ..arrays import FloatArray, frozen_array
 from ..errors import Outcome
+from ..markup import html_table
 from .sweep_cases import case_label
 
 if TYPE_CHECKING:
     import xarray
 
+_SHOWN = 10  # cases that a notebook lists
 HISTORY_ARRAYS = (
     "free_electron_fraction",
     "ionized_hydrogen_fraction",
@@ -136,6 +138,15 @@ class Sweep:
             found[name] = ("case", self[name], {"units": unit})
         found |= {"outcome": ("case", list(self.outcome)), "reason": ("case", list(self.reason))}
         return xarray.Dataset(found, coordinates)
+
+    def _repr_html_(self) -> str:
+        """Show the first cases in a notebook."""
+        rows = [
+            (self.label(k), self.outcome[k], self.reason[k]) for k in range(min(len(self), _SHOWN))
+        ]
+        if len(self) > _SHOWN:
+            rows.append((f"{len(self) - _SHOWN} more", "", ""))
+        return html_table(repr(self)[1:-1], ("case", "outcome", "reason"), rows)
 
     def __repr__(self) -> str:
         """One line: how many cases, over which keys, how they ended."""

@@ -75,12 +75,16 @@ def _versions(origins: Sequence[Origin]) -> str:
 
 
 def _digests(origins: Sequence[Origin]) -> str:
-    return ", ".join(dict.fromkeys(one.text("setup_digest") for one in origins))
+    """Digests of the setups; of a sweep, which has many, that of the file."""
+    setups = [one.text("setup_digest") for one in origins if "setup_digest" in one.attributes]
+    others = [one.text("digest") for one in origins if "setup_digest" not in one.attributes]
+    named = [f"setup {', '.join(dict.fromkeys(setups))}"] if setups else []
+    return "; ".join([*named, *(f"file {one}" for one in dict.fromkeys(others))])
 
 
 def program_text(origins: Sequence[Origin]) -> str:
     """Cite the program with the versions and setup digests of the results, in one line."""
-    return f"{AUTHORS}, {TITLE}, version {_versions(origins)}; setup {_digests(origins)}"
+    return f"{AUTHORS}, {TITLE}, version {_versions(origins)}; {_digests(origins)}"
 
 
 def program_entry(origins: Sequence[Origin]) -> str:
@@ -89,7 +93,7 @@ def program_entry(origins: Sequence[Origin]) -> str:
         "author": f"{{{AUTHORS}}}",
         "title": f"{{{TITLE}}}",
         "version": _versions(origins),
-        "note": f"setup {_digests(origins)}",
+        "note": _digests(origins),
     }
     return _entry("misc", "levelnet", fields)
 

@@ -7,6 +7,8 @@ from dataclasses import dataclass, field
 from typing import ClassVar
 
 _WARNING = "warning: "
+UNKNOWN = "unknown"
+"""What a file that does not state something is taken to say."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -26,7 +28,7 @@ class Origin:
 
     def text(self, key: str) -> str:
         """One attribute as text; "unknown" where the file does not state it."""
-        return str(self.attributes.get(key, "unknown"))
+        return str(self.attributes.get(key, UNKNOWN))
 
 
 @dataclass(frozen=True, slots=True)

@@ -12,6 +12,7 @@ from ...history.result import History
 from ...history.setup import Setup, parse_setup
 from ...studies.escape_records import EscapeStudy
 from ...studies.level_records import LevelStudy
+from ...studies.sweep_record import Sweep
 from ...studies.weighing import Weighing
 from ...tables import TableSource
 from .citing import citing_section
@@ -21,6 +22,7 @@ from .fast_chapter import fast_chapter
 from .history_chapter import history_chapter
 from .levels_chapter import levels_chapter
 from .render import page_text
+from .sweep_chapter import sweep_chapter
 from .table_chapter import table_chapter
 from .weighing_chapter import weighing_chapter
 from .works import Work, tables_read, works_of
@@ -31,6 +33,7 @@ _CHAPTERS: dict[type, Callable[[Any, Origin, str], Chapter]] = {
     EscapeStudy: escape_chapter,
     EffectiveTable: table_chapter,
     Weighing: weighing_chapter,
+    Sweep: sweep_chapter,
 }
 
 
@@ -69,10 +72,11 @@ def html_page(
     tables: list[TableSource] = []
     for k, (record, origin) in enumerate(results):
         tell("drawing", k / len(results))
-        setup = _setup_of(record, origin)
-        chapters.append(_chapter(record, setup, origin, f"r{k + 1}"))
-        works += works_of(record, setup)
-        tables += tables_read(setup)
+        setups = _setups_of(record, origin)
+        chapters.append(_chapter(record, setups[0], origin, f"r{k + 1}"))
+        for setup in setups:
+            works += works_of(record, setup)
+            tables += tables_read(setup)
     return page_text(
         title or _title(chapters),
         chapters,
@@ -88,12 +92,14 @@ def _title(chapters: Sequence[Chapter]) -> str:
     return chapters[0].what if len(chapters) == 1 else f"{len(chapters)} results"
 
 
-def _setup_of(record: object, origin: Origin) -> Setup:
-    """The setup in a record, or, for one that carries none, that of its file."""
+def _setups_of(record: object, origin: Origin) -> tuple[Setup, ...]:
+    """The setup in a record, or, for one that carries none, that of its file; of a sweep all."""
+    if isinstance(record, Sweep):
+        return tuple(parse_setup(text, f"{origin.name}: stored setup") for text in record.setups)
     setup = getattr(record, "setup", None)
     if isinstance(setup, Setup):
-        return setup
-    return parse_setup(origin.text("setup"), f"{origin.name}: stored setup")
+        return (setup,)
+    return (parse_setup(origin.text("setup"), f"{origin.name}: stored setup"),)
 
 
 def _chapter(record: object, setup: Setup, origin: Origin, prefix: str) -> Chapter:

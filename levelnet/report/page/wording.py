@@ -10,7 +10,7 @@ from ...background.parameters import helium_mass_fraction
 from ...history.setup import Setup
 from ...quantities import OBSERVABLES
 from ...studies.requirement import Finding
-from .content import Block, Facts, Listing, Origin, Section, Statements
+from .content import UNKNOWN, Block, Facts, Listing, Origin, Section, Statements
 
 _LIBRARIES = ("numpy", "scipy", "numba", "h5py")
 _NUMBERS = re.compile(r"\[\n((?:    [-+.0-9e]+,\n)+)\]")  # an array, a number a line
@@ -106,17 +106,21 @@ def origin_section(prefix: str, origin: Origin) -> Section:
         ("setup digest", origin.text("setup_digest")),
         ("digest of the content", origin.text("digest")),
     ]
-    text = _NUMBERS.sub(_wrapped, origin.text("setup"))
-    if len(text) > _LONGEST_SETUP:
-        text = f"{text[:_LONGEST_SETUP]}\n# cut here; the result file holds all of it"
-    whole = Listing("The whole setup as TOML, defaults included", text.rstrip("\n"))
+    blocks: list[Block] = [Facts(tuple(one for one in rows if one[1] != UNKNOWN))]
+    if "setup" in origin.attributes:  # a sweep has one for each case
+        blocks.append(_whole_setup(origin.text("setup")))
     checksums = Listing(
         "Atomic tables shipped with that version, and their sha256",
         origin.text("table_checksums"),
     )
-    return Section(
-        f"{prefix}-origin", "Where it comes from", (Facts(tuple(rows)), whole, checksums)
-    )
+    return Section(f"{prefix}-origin", "Where it comes from", (*blocks, checksums))
+
+
+def _whole_setup(toml: str) -> Listing:
+    text = _NUMBERS.sub(_wrapped, toml)
+    if len(text) > _LONGEST_SETUP:
+        text = f"{text[:_LONGEST_SETUP]}\n# cut here; the result file holds all of it"
+    return Listing("The whole setup as TOML, defaults included", text.rstrip("\n"))
 
 
 def _wrapped(array: re.Match[str]) -> str:

@@ -8,6 +8,7 @@ in none of these, so that they stand in no entry either.
 from __future__ import annotations
 
 from collections.abc import Iterator
+from functools import cache
 from typing import NamedTuple
 
 from ...distilled.table import EffectiveTable
@@ -76,6 +77,11 @@ def tables_read(setup: Setup | None) -> tuple[TableSource, ...]:
     """Atomic tables that a result was computed from; others in the package serve tests alone."""
     if setup is None or not setup.helium_recombines:
         return ()
+    return _helium_tables()
+
+
+@cache
+def _helium_tables() -> tuple[TableSource, ...]:
     return tuple(one for one in list_tables() if one.name in _HELIUM_TABLES)
 
 
