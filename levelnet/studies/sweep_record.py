@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
@@ -117,8 +118,8 @@ class Sweep:
 
     def label(self, k: int) -> str:
         """Case as a person knows it: its position and what is special in it."""
-        special = zip(self.swept, self.columns, strict=True)
-        return case_label(k, ((name, column[k]) for name, column in special))
+        special = zip(self.swept, (column[k] for column in self.columns), strict=True)
+        return case_label(k, ((name, value) for name, value in special if not _left_out(value)))
 
     def to_xarray(self) -> xarray.Dataset:
         """Everything as an xarray Dataset with the swept keys as coordinates (needs the extra)."""
@@ -152,3 +153,8 @@ class Sweep:
         """One line: how many cases, over which keys, how they ended."""
         over = ", ".join(self.swept) or "nothing"
         return f"<Sweep of {len(self)} cases over {over}: {len(self.not_ok)} not ok>"
+
+
+def _left_out(value: object) -> bool:
+    """Whether a case leaves a swept key out: NaN among numbers, empty among texts."""
+    return value == "" or (isinstance(value, float) and math.isnan(value))

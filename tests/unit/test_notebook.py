@@ -21,7 +21,7 @@ from levelnet.report.plot import makers_of
 from tests.small_runs import small_setup
 from tests.unit.test_report_page import record_of
 
-KINDS = ("history", "field", "levels", "escape", "certificate", "table", "fast", "budget")
+KINDS = ("history", "field", "levels", "escape", "certificate", "table", "fast", "budget", "sweep")
 EXAMPLES = Path(levelnet.__file__).parent / "examples"
 BAD = '<img src=x onerror="alert(1)">&'
 

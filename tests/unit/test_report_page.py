@@ -27,13 +27,16 @@ from levelnet.report.page.citing import bibtex
 from levelnet.report.page.content import Origin, Table
 from levelnet.report.page.page import html_page
 from levelnet.report.page.works import Work, works_of
+from levelnet.store.sweep_layout import sealed_content
 from levelnet.store.write import content_of
+from levelnet.studies.sweep_record import Sweep
 from tests.invented_escape import cheap_study
 from tests.invented_history import history_with_field, invented_history
 from tests.invented_weighing import band_targets, invented_budget, invented_weighing
 from tests.small_levels import small_study
 from tests.small_runs import small_setup
 from tests.small_tables import small_table
+from tests.unit.test_store_sweep import invented as invented_sweep
 
 ROOT = Path(__file__).resolve().parents[2]
 BAD = "<script>alert(1)</script> & \"'</title></style> ]]> \u03b1"
@@ -49,11 +52,15 @@ KINDS = (
     "fast",
     "weighing",
     "budget",
+    "sweep",
+    "sweep apart",
 )
 
 
 def origin_of(record: object, setup: Setup) -> Origin:
     """What a file would say, where the record can be stored; else the least that a page needs."""
+    if isinstance(record, Sweep):
+        return Origin("result.h5", sealed_content(record).attributes)
     try:
         return Origin("result.h5", content_of(record).attributes)
     except InputError:
@@ -80,6 +87,8 @@ def invented_certificate() -> Certificate:
 def record_of(kind: str) -> tuple[object, Setup]:
     """A result of each kind, and its setup; all are invented or small."""
     record: object
+    if kind.startswith("sweep"):
+        return invented_sweep(apart=kind == "sweep apart", reason=("", "", BAD)), small_setup(4)
     if kind in {"levels", "escape"}:
         study = small_study() if kind == "levels" else cheap_study()
         return study, study.setup
@@ -207,6 +216,14 @@ def test_warnings_come_first_and_say_so_in_words() -> None:
     assert "".join(notes[0].itertext()).startswith("Warning:")
     said = ["".join(one.itertext()) for one in tree.iter("p")]
     assert f"Not converged: {Outcome.STEP_LIMIT.value}" in said
+
+
+def test_failed_cases_of_a_sweep_are_warnings() -> None:
+    text = " ".join(tree_of(page_of("sweep")).itertext())
+    assert "1 of 3 cases may not be used as they stand" in text
+    assert "Warning:" in text and BAD in text
+    assert "3 values, 4 to 6" in text and "2 values, 0 to 0.1" in text  # one leaves its key out
+    assert "file sha256:" in text  # no setup digest: a sweep has many setups
 
 
 def test_numbers_are_those_of_the_result() -> None:
