@@ -40,6 +40,8 @@ def citing_section(
                 "The publications below are those that these results rest on; each stands in the "
                 "code that uses it. Titles and first names are not stated there, so they are in no "
                 "entry: add them where a journal asks for them.",
+                "Several are cited in the code from memory, and marked so there: look volume and "
+                "page up before they go into print.",
             )
         ),
         Table(
