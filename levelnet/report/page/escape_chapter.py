@@ -27,7 +27,9 @@ from .content import Block, Chapter, Facts, Origin, Picture, Section, Table
 from .drawing import picture
 from .wording import (
     asked_section,
+    largest_distortion,
     limit_text,
+    most_through,
     observable_label,
     one_line,
     origin_section,
@@ -146,56 +148,55 @@ def _shares(study: EscapeStudy) -> Table:
 
 
 def _pictures(study: EscapeStudy, found: EscapeVerdict, prefix: str) -> tuple[Picture, ...]:
-    worst = [
-        f"{study.variants.name[k]} {signed_percent(one.value)} at z = {one.redshift:.0f}"
-        for k in study.treatments.tolist()
-        for one in [largest_difference(study, k, found.low, found.high)]
-    ]
-    effects = switch_effects(study).last
-    largest = [
-        f"{name} {signed_percent(curve[int(np.argmax(np.abs(curve)))])}"
-        for name, curve in zip(study.switches.name, effects, strict=True)
-    ]
-    channels = study.channels
-    first = int(np.argmax(channels.cumulative_share[-1]))
     pictures = [
         picture(
             treatment_figure(study),
             f"{prefix}-treatments",
             "Treatments without a field against the reference",
             "Relative difference of x_e in per cent against redshift, all treatments (left) and "
-            f"those that are close (right). The largest: {'; '.join(worst)}.",
+            f"those that are close (right). The largest: {_worst(study, found)}.",
         ),
         picture(
             switch_figure(study),
             f"{prefix}-switches",
             "What each switch of the field does",
             "Change of x_e in per cent against redshift, each switch added first, last and in "
-            f"order. Added last, at the largest: {'; '.join(largest)}.",
+            f"order. Added last, at the largest: {_largest_last(study)}.",
         ),
         picture(
             escape_channel_figure(study),
             f"{prefix}-channels",
             "How atoms reach the ground state in the reference",
-            "Shares of the channels at each redshift (left) and since the start (right). Most "
-            f"atoms, {100.0 * channels.cumulative_share[-1, first]:.2f} %, went through "
-            f"{channels.names[first]}.",
+            f"Shares of the channels at each redshift (left) and since the start (right). "
+            f"{most_through(study.channels)}",
         ),
     ]
     if study.field is not None:
-        field = study.field
-        row, column = np.unravel_index(np.argmax(field.log_distortion), field.log_distortion.shape)
-        pictures.append(
-            picture(
-                escape_spectrum_figure(study),
-                f"{prefix}-spectrum",
-                "The field of the reference",
-                "Occupation number over that of the blackbody around Lyman-alpha at a few "
-                f"redshifts. Its largest logarithm is {field.log_distortion[row, column]:.3g}, at "
-                f"{field.photon_energy_ev[column]:.3f} eV and z = {field.redshift[row]:.0f}.",
-            )
+        title = "The field of the reference"
+        said = (
+            "Occupation number over that of the blackbody around Lyman-alpha at a few redshifts. "
+            f"{largest_distortion(study.field)}"
         )
+        pictures.append(picture(escape_spectrum_figure(study), f"{prefix}-spectrum", title, said))
     return tuple(pictures)
+
+
+def _worst(study: EscapeStudy, found: EscapeVerdict) -> str:
+    """Largest difference of each treatment."""
+    said = []
+    for k in study.treatments.tolist():
+        one = largest_difference(study, k, found.low, found.high)
+        name = study.variants.name[k]
+        said.append(f"{name} {signed_percent(one.value)} at z = {one.redshift:.0f}")
+    return "; ".join(said)
+
+
+def _largest_last(study: EscapeStudy) -> str:
+    """Largest effect of each switch, added last."""
+    effects = zip(study.switches.name, switch_effects(study).last, strict=True)
+    return "; ".join(
+        f"{name} {signed_percent(curve[int(np.argmax(np.abs(curve)))])}" for name, curve in effects
+    )
 
 
 def _trust(study: EscapeStudy, found: EscapeVerdict) -> tuple[Block, ...]:

@@ -7,13 +7,15 @@ import math
 import numpy as np
 
 from ...constants import SECONDS_PER_YEAR
-from ...history.result import History
+from ...history.result import History, RadiationField
 from ...history.samples import sample_rows
 from ..figures import make_figures
 from .content import Block, Chapter, Facts, Origin, Picture, Section, Table
 from .drawing import picture
 from .wording import (
     asked_section,
+    largest_distortion,
+    most_through,
     number,
     one_line,
     origin_section,
@@ -141,9 +143,7 @@ def _said(history: History) -> dict[str, tuple[str, str]]:
     species = history.species[0]
     row = int(np.argmin(np.abs(z - _middle(marks.visibility_peak_redshift, z))))
     excited = species.log_departure[row, species.levels.n > 1]
-    channels = history.channels
-    first = int(np.argmax(channels.cumulative_share[-1]))
-    spectra = "" if history.field is None else _spectrum(history)
+    spectra = "" if history.field is None else _spectrum(history.field)
     return {
         "history": (
             "Ionization and temperatures",
@@ -166,9 +166,8 @@ def _said(history: History) -> dict[str, tuple[str, str]]:
         ),
         "channels": (
             "How atoms reach the ground state",
-            f"Shares of the channels at each redshift (left) and since the start (right). Down to "
-            f"z = {z[-1]:g} most atoms, {100.0 * channels.cumulative_share[-1, first]:.2f} %, "
-            f"went through {channels.names[first]}.",
+            "Shares of the channels at each redshift (left) and since the start (right). "
+            f"{most_through(history.channels)}",
         ),
         "visibility": (
             "Visibility",
@@ -184,15 +183,11 @@ def _middle(peak: float, redshift: np.ndarray) -> float:
     return peak if math.isfinite(peak) else float(redshift[len(redshift) // 2])
 
 
-def _spectrum(history: History) -> str:
-    field = history.field
-    assert field is not None
-    row, column = np.unravel_index(np.argmax(field.log_distortion), field.log_distortion.shape)
+def _spectrum(field: RadiationField) -> str:
     return (
         "Occupation number of photons over that of the blackbody, against photon energy from half "
-        "of Lyman-alpha to the Lyman limit, and close to Lyman-alpha, at a few redshifts. Its "
-        f"largest logarithm is {field.log_distortion[row, column]:.3g}, at "
-        f"{field.photon_energy_ev[column]:.3f} eV and z = {field.redshift[row]:.0f}."
+        "of Lyman-alpha to the Lyman limit, and close to Lyman-alpha, at a few redshifts. "
+        f"{largest_distortion(field)}"
     )
 
 

@@ -6,7 +6,10 @@ import math
 import re
 import textwrap
 
+import numpy as np
+
 from ...background.parameters import helium_mass_fraction
+from ...history.result import Channels, RadiationField
 from ...history.setup import Setup
 from ...quantities import OBSERVABLES
 from ...studies.requirement import Finding
@@ -138,3 +141,19 @@ def short_name(target: str) -> str:
 def limit_text(one: Finding) -> str:
     """Head of a column of a demand."""
     return f"{short_name(one.name)}, at most {one.limit:g} {one.unit}"
+
+
+def most_through(channels: Channels) -> str:
+    """Say which channel most atoms took."""
+    first = int(np.argmax(channels.cumulative_share[-1]))
+    share = 100.0 * channels.cumulative_share[-1, first]
+    return f"Most atoms, {share:.2f} %, went through {channels.names[first]}."
+
+
+def largest_distortion(field: RadiationField) -> str:
+    """Say where a field differs most from the blackbody."""
+    row, column = np.unravel_index(np.argmax(field.log_distortion), field.log_distortion.shape)
+    return (
+        f"Its largest logarithm is {field.log_distortion[row, column]:.3g}, at "
+        f"{field.photon_energy_ev[column]:.3f} eV and z = {field.redshift[row]:.0f}."
+    )
