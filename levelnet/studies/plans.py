@@ -6,6 +6,7 @@ earlier run may save is not known beforehand.
 
 from __future__ import annotations
 
+import dataclasses
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
 
@@ -27,6 +28,8 @@ from .weigh_budget import parts_of
 
 # A weighing solves once, takes every reduction once more backwards, and sums over the steps.
 _HISTORIES_OF_A_WEIGHING = 3.0
+# The histories of a certificate, measured at n_max = 40; they hardly depend on it.
+_CERTIFICATE_S = 6.0
 
 
 @dataclass(frozen=True, slots=True)
@@ -126,7 +129,11 @@ def plan_distill(
     check_distillable(setup, kept, tolerance)
     count = expected_reductions(tolerance, certify)
     one = Cost(check_memory(setup, workers).memory_bytes, node_seconds(setup))
-    return make_plan(f"table of setup {setup.digest}", [setup] * count, [one] * count, workers)
+    certificate = Cost(one.memory_bytes, _CERTIFICATE_S if certify else 0.0)
+    costs = [certificate, *[one] * count]
+    what = f"table of setup {setup.digest}"
+    plan = make_plan(what, [setup], costs, workers, certificate.seconds)
+    return dataclasses.replace(plan, runs=count)
 
 
 def plan_weigh(setup: Setup, n_targets: int, n_band: int) -> Plan:
