@@ -114,6 +114,7 @@ def test_plan_prints_or_refuses_and_writes_nothing(
     assert "is valid; nothing was computed" in said and "\nmemory" in said and "\ntime" in said
     assert main([*words, "--json"]) == 0
     plan: dict[str, Any] = json.loads(capsys.readouterr().out)
+    assert len(plan["setup_digest"]) == 16 and plan["setup_digest"] in plan["what"]
     assert plan["memory_bytes"] > 8 * 400**3 / 3
     assert 0.0 < plan["seconds"] <= plan["processor_seconds"]
     monkeypatch.setattr(cost, "available_memory_bytes", lambda: 3.2e8)
