@@ -124,7 +124,13 @@ def test_kills_at_random_moments(command: str, tmp_path: Path) -> None:
     assert not list(torn.glob("*.part"))
 
 
-@pytest.mark.parametrize("command", ["solve", "levels", "sweep", "distill"])
+@pytest.mark.parametrize(
+    "command",
+    [
+        "levels",
+        *(pytest.param(one, marks=pytest.mark.slow) for one in ("solve", "sweep", "distill")),
+    ],
+)
 def test_sigterm_ends_a_command_in_order(command: str, tmp_path: Path) -> None:
     folder = prepared(tmp_path / "work")
     for path in folder.glob("*.toml"):
