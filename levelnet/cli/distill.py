@@ -90,7 +90,7 @@ def run(options: argparse.Namespace, console: Console) -> int:
     kept = None if options.kept is None else kept_levels(options.kept)
     target = options.output or Path(f"{options.setup.stem}-table.h5")
     languages = tuple(dict.fromkeys(options.export or ()))
-    check_target(target, options.force, options.setup)
+    check_target(target, options.force or options.plan, options.setup)
     check_exports(target, languages, options.force)
     workers = worker_count(options.workers)
     if options.plan:

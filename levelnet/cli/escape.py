@@ -57,7 +57,7 @@ def run(options: argparse.Namespace, console: Console) -> int:
     requirement = asked_requirement(options.requirement, setup)
     order = None if options.order is None else _names(options.order)
     target = options.output or Path(f"{options.setup.stem}-escape.h5")
-    check_target(target, options.force, options.setup)
+    check_target(target, options.force or options.plan, options.setup)
     asked = () if requirement is None else tuple(requirement.to_toml().splitlines())
     question = Question(options.within, *asked_range(setup, options), asked)
     _check_place(options)

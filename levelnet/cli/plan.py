@@ -27,6 +27,7 @@ def print_plan(plan: Plan, as_json: bool) -> int:
         print_json(
             {
                 "what": plan.what,
+                "setup_digest": plan.setup_digest,
                 "runs": plan.runs,
                 "workers": plan.workers,
                 "memory_bytes": plan.memory_bytes,

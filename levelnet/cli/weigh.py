@@ -133,7 +133,7 @@ def _check_places(
 ) -> None:
     """Refuse what cannot be written before any work starts."""
     if options.output is not None:
-        check_target(options.output, options.force, options.setup)
+        check_target(options.output, options.force or options.plan, options.setup)
     if options.plot is not None:
         from ..report.figures import check_free
         from ..report.weights import figure_paths

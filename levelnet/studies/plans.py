@@ -6,6 +6,7 @@ earlier run may save is not known beforehand.
 
 from __future__ import annotations
 
+import dataclasses
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
 
@@ -27,6 +28,8 @@ from .weigh_budget import parts_of
 
 # A weighing solves once, takes every reduction once more backwards, and sums over the steps.
 _HISTORIES_OF_A_WEIGHING = 3.0
+# The histories of a certificate, measured at n_max = 40; they hardly depend on it.
+_CERTIFICATE_S = 6.0
 
 
 @dataclass(frozen=True, slots=True)
@@ -45,6 +48,8 @@ class Plan:
         Largest memory in use by all of them at once, and what is there.
     seconds, processor_seconds : float, s
         Time on the clock, and on one processor.
+    setup_digest : str
+        Of the one setup that it is about; "" for several.
     """
 
     what: str
@@ -54,6 +59,7 @@ class Plan:
     available_bytes: float
     seconds: float
     processor_seconds: float
+    setup_digest: str = ""
 
 
 def make_plan(
@@ -85,7 +91,7 @@ def make_plan(
 
 def plan_solve(setup: Setup) -> Plan:
     """One history."""
-    return make_plan(f"setup {setup.digest}", [setup], [check_memory(setup)], 1)
+    return _about(setup, make_plan(f"setup {setup.digest}", [setup], [check_memory(setup)], 1))
 
 
 def plan_levels(
@@ -99,7 +105,7 @@ def plan_levels(
     jobs, coarse = ladder_jobs(study_setup(setup, also_at), rungs, resolve)
     every = [*jobs, *coarse]
     costs = [estimate(one, POPULATION_REDSHIFTS) for one in every]
-    return make_plan(f"ladder of setup {setup.digest}", every, costs, workers)
+    return _about(setup, make_plan(f"ladder of setup {setup.digest}", every, costs, workers))
 
 
 def plan_escape(
@@ -112,7 +118,8 @@ def plan_escape(
     setups = [variant_setup(on_grid, one) for one in variants]
     costs = [estimate(one, 0, reduced=k != plan.base) for k, one in enumerate(setups)]
     first = costs[plan.base].seconds
-    return make_plan(f"variants of setup {setup.digest}", setups, costs, workers, first)
+    what = f"variants of setup {setup.digest}"
+    return _about(setup, make_plan(what, setups, costs, workers, first))
 
 
 def plan_distill(
@@ -126,7 +133,11 @@ def plan_distill(
     check_distillable(setup, kept, tolerance)
     count = expected_reductions(tolerance, certify)
     one = Cost(check_memory(setup, workers).memory_bytes, node_seconds(setup))
-    return make_plan(f"table of setup {setup.digest}", [setup] * count, [one] * count, workers)
+    certificate = Cost(one.memory_bytes, _CERTIFICATE_S if certify else 0.0)
+    costs = [certificate, *[one] * count]
+    what = f"table of setup {setup.digest}"
+    plan = make_plan(what, [setup], costs, workers, certificate.seconds)
+    return _about(setup, dataclasses.replace(plan, runs=count))
 
 
 def plan_weigh(setup: Setup, n_targets: int, n_band: int) -> Plan:
@@ -137,4 +148,9 @@ def plan_weigh(setup: Setup, n_targets: int, n_band: int) -> Plan:
     each = Cost(cost.memory_bytes, _HISTORIES_OF_A_WEIGHING * cost.seconds)
     again = Cost(cost.memory_bytes, (_HISTORIES_OF_A_WEIGHING - 1.0) * cost.seconds)
     costs = [each, *[again] * len(others)]
-    return make_plan(f"weighing of setup {setup.digest}", [setup] * len(costs), costs, 1)
+    what = f"weighing of setup {setup.digest}"
+    return _about(setup, make_plan(what, [setup] * len(costs), costs, 1))
+
+
+def _about(setup: Setup, plan: Plan) -> Plan:
+    return dataclasses.replace(plan, setup_digest=setup.digest)

@@ -63,7 +63,8 @@ class Sweep:
     observable_names, observable_units : tuple of str, length n_observables
         What each column of `observable` is, in which unit.
     observable : ndarray, shape (n_cases, n_observables)
-        In these units; NaN where the case failed or its grid does not reach the event.
+        Values, in units of `observable_units`; NaN where the case failed or its grid does not reach
+        the event.
     """
 
     title: str

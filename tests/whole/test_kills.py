@@ -22,7 +22,7 @@ from tests.whole.test_command_line import GOOD, environment
 
 KILLS = 7
 SMALL = GOOD.replace("n_max = 4", "n_max = 6").replace("n_redshifts = 30", "n_redshifts = 12")
-COARSE = "[lines.transfer]\nfrequency_step = 2e-3\n[accuracy]\nrelative = 1e-4\n"
+COARSE = "[lines.transfer]\nfrequency_step = 1e-3\n[accuracy]\nrelative = 1e-4\n"
 FIELD = SMALL.replace("200.0", "900.0") + '[lines]\nhydrogen = "transfer"\n' + COARSE
 SWEEP = SMALL.replace("[", "[setup.") + (
     "[combine]\nhydrogen.n_max = [4, 5]\ncosmology.curvature_density = [0.0, 0.01]\n"
@@ -124,7 +124,13 @@ def test_kills_at_random_moments(command: str, tmp_path: Path) -> None:
     assert not list(torn.glob("*.part"))
 
 
-@pytest.mark.parametrize("command", ["solve", "levels", "sweep", "distill"])
+@pytest.mark.parametrize(
+    "command",
+    [
+        "levels",
+        *(pytest.param(one, marks=pytest.mark.slow) for one in ("solve", "sweep", "distill")),
+    ],
+)
 def test_sigterm_ends_a_command_in_order(command: str, tmp_path: Path) -> None:
     folder = prepared(tmp_path / "work")
     for path in folder.glob("*.toml"):
