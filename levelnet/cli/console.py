@@ -23,6 +23,10 @@ def one_line(text: str) -> str:
     return " ".join(text.split())
 
 
+class Terminated(KeyboardInterrupt):
+    """SIGTERM came: like Ctrl-C, with an exit code of its own."""
+
+
 class Console:
     """Where a command speaks to the person; results go to stdout and not through here.
 
@@ -34,7 +38,7 @@ class Console:
 
     def __init__(self, quiet: bool = False) -> None:
         self.quiet = quiet
-        self.interrupted = False
+        self.ending: type[KeyboardInterrupt] | None = None
 
     def notice(self, text: str) -> None:
         """Say something that is neither result nor complaint."""
@@ -108,8 +112,8 @@ class ProgressBar:
 
     def __call__(self, stage: str, fraction: float) -> None:
         """Note that `stage` is done to `fraction`, 0 to 1."""
-        if self._console.interrupted:
-            raise KeyboardInterrupt
+        if self._console.ending is not None:
+            raise self._console.ending
         with self._lock:
             self._state = (stage, fraction)
             if self._bar is not None:

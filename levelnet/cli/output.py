@@ -15,11 +15,9 @@ from .helium_output import helium_line_rows, helium_text, helium_values
 from .line_output import line_rows, line_values
 
 if TYPE_CHECKING:
-    from ..arrays import FloatArray
     from ..history.result import Diagnostics, History, RadiationField
     from ..history.setup import Setup
 
-_SAMPLES = (1700.0, 1400.0, 1300.0, 1200.0, 1100.0, 1000.0, 800.0, 500.0, 200.0, 100.0, 50.0, 20.0)
 _CHANNELS_SHOWN = 6
 
 
@@ -106,26 +104,12 @@ def time_text(seconds: float) -> str:
     return f"{seconds / 3600.0:.1f} h"
 
 
-def sample_rows(history: History) -> list[int]:
-    """Find the outputs nearest to a few round redshifts; indices, each once, ascending."""
-    return nearest_rows(history.redshift)
-
-
-def nearest_rows(redshift: FloatArray, samples: tuple[float, ...] = _SAMPLES) -> list[int]:
-    """Find the same in a descending array of redshifts, or those nearest to other `samples`."""
-    import numpy as np
-
-    low, high = redshift[-1], redshift[0]
-    wanted = [z for z in samples if low <= z <= high] or [float(high)]
-    nearest = {int(np.argmin(np.abs(redshift - z))) for z in wanted}
-    # The last output is what most readers ask for.
-    return sorted(nearest | {len(redshift) - 1})
-
-
 def history_values(history: History) -> dict[str, Any]:
     """Collect what the summary shows, under the names of the result's fields."""
+    from ..history.samples import sample_rows
+
     marks, how, setup = history.milestones, history.diagnostics, history.setup
-    rows = sample_rows(history)
+    rows = sample_rows(history.redshift)
     return {
         "title": setup.title,
         "setup_digest": setup.digest,
@@ -193,7 +177,9 @@ def summary_text(history: History) -> str:
     ]
     body = [*_milestone_lines(history), "", *_sample_lines(history), "", *_share_lines(history)]
     if history.lines.names:
-        table = line_rows(history, sample_rows(history))
+        from ..history.samples import sample_rows
+
+        table = line_rows(history, sample_rows(history.redshift))
         body += ["", *aligned(table, right=True)]
     if of_helium := helium_line_rows(history):
         body += ["", *aligned(of_helium, right=True)]
@@ -230,7 +216,9 @@ def _milestone_lines(history: History) -> list[str]:
 
 
 def _sample_lines(history: History) -> list[str]:
-    rows = sample_rows(history)
+    from ..history.samples import sample_rows
+
+    rows = sample_rows(history.redshift)
     head = ("z", "x_e", "x_HI", "T_m (K)", "T_r (K)")
     body = [
         (

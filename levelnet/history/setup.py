@@ -26,6 +26,7 @@ from ..escape.frequency_step import (
     highest_line,
 )
 from ..escape.lines import HIGHEST_FED, Lines
+from ..markup import html_text
 from ..records import build, checked_record, from_mapping
 from ..texts import read_text
 
@@ -290,6 +291,10 @@ class Setup:
         import tomli_w
 
         return tomli_w.dumps(_plain(dataclasses.asdict(self)))
+
+    def _repr_html_(self) -> str:
+        """Show the setup in a notebook, under its title and digest."""
+        return html_text(f"Setup {self.digest}: {self.title or '(no title)'}", self.to_toml())
 
     @property
     def digest(self) -> str:

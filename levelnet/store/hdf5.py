@@ -55,6 +55,7 @@ def load(path: Path, layouts: Iterable[Layout] = (layout.HISTORY_LAYOUT,)) -> Co
     with path.open("rb") as stream, h5py.File(stream, "r") as file:
         chosen = _layout_of(file, path, layouts)
         content = Content(attributes=_attributes(file, chosen.attributes, ""))
+        chosen = _own_layout(chosen, content)
         known = {one.name: one for one in (*chosen.required, *chosen.optional)}
         required = [one.name for one in chosen.required]
         for name in _members(file, "", known, required):
@@ -77,6 +78,16 @@ def _layout_of(file: h5py.File, path: Path, layouts: Iterable[Layout]) -> Layout
             "that this levelnet reads; update levelnet"
         )
     return chosen
+
+
+def _own_layout(chosen: Layout, content: Content) -> Layout:
+    """The layout of this very file, where it depends on attributes."""
+    if chosen.by_attributes is None:
+        return chosen
+    try:
+        return chosen.by_attributes(content.attributes)
+    except ValueError as error:
+        raise Damage(str(error)) from None
 
 
 def _load_group(file: h5py.File, group: Group, content: Content) -> None:

@@ -30,6 +30,7 @@ from .level_layout import LEVEL_LAYOUT
 from .parts import all_fields, fields_of, merge, outcome_of
 from .schema import Content, Layout
 from .study_makers import escape_study_of, level_study_of, weighing_of
+from .sweep_layout import SWEEP_LAYOUT, sweep_of
 from .table_layout import DISTILLED_LAYOUT, TABLE_LAYOUT
 from .weighing_layout import WEIGHING_LAYOUT
 
@@ -38,15 +39,16 @@ if TYPE_CHECKING:
     from ..distilled.table import EffectiveTable
     from ..studies.escape_records import EscapeStudy
     from ..studies.level_records import LevelStudy
+    from ..studies.sweep_record import Sweep
     from ..studies.weighing import Weighing
 
-    Record = History | EffectiveTable | FastHistory | Weighing | LevelStudy | EscapeStudy
+    Record = History | EffectiveTable | FastHistory | Weighing | LevelStudy | EscapeStudy | Sweep
 
 _HDF5_SIGNATURE = b"\x89HDF\r\n\x1a\n"
 
 
 def read(path: str | Path) -> Record:
-    """Read a history, a table of effective rates, a history made from one, or a study.
+    """Read a history, a table of effective rates, a history made from one, a study, or a sweep.
 
     Parameters
     ----------
@@ -55,7 +57,7 @@ def read(path: str | Path) -> Record:
 
     Returns
     -------
-    History, EffectiveTable, FastHistory, Weighing, LevelStudy or EscapeStudy
+    History, EffectiveTable, FastHistory, Weighing, LevelStudy, EscapeStudy or Sweep
         Equal to what was written, to the bit.
 
     Raises
@@ -64,6 +66,12 @@ def read(path: str | Path) -> Record:
         If the file is missing, foreign, damaged or of a newer layout; one line that names it.
     """
     return _record(path, read_content(path))
+
+
+def read_with_attributes(path: str | Path) -> tuple[Record, dict[str, str | int]]:
+    """Read a record with what its file says of itself, in one pass; as :func:`read`."""
+    content = read_content(path)
+    return _record(path, content), content.attributes
 
 
 def _record(path: str | Path, content: Content) -> Record:
@@ -222,4 +230,5 @@ _MAKERS: dict[str, tuple[Layout, Callable[[Content], Record]]] = {
     WEIGHING_LAYOUT.name: (WEIGHING_LAYOUT, weighing_of),
     LEVEL_LAYOUT.name: (LEVEL_LAYOUT, level_study_of),
     ESCAPE_LAYOUT.name: (ESCAPE_LAYOUT, escape_study_of),
+    SWEEP_LAYOUT.name: (SWEEP_LAYOUT, sweep_of),
 }
