@@ -338,7 +338,7 @@ def integrate_slow(
 
     return integrate(
         equations.rate,
-        equations.jacobian,
+        equations.slopes,
         start,
         state,
         outputs,
