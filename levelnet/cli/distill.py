@@ -92,6 +92,10 @@ def run(options: argparse.Namespace, console: Console) -> int:
     languages = tuple(dict.fromkeys(options.export or ()))
     check_target(target, options.force or options.plan, options.setup)
     check_exports(target, languages, options.force)
+    if languages:
+        from ..distilled.kept import check_exported_setup
+
+        check_exported_setup(setup)
     workers = worker_count(options.workers)
     if options.plan:
         from ..studies.plans import plan_distill

@@ -55,6 +55,14 @@ def helium_values(history: History, rows: list[int] | IntArray) -> dict[str, Any
     return found | {"line_redshift": history.redshift[rows], "line_figures": figures_of_lines}
 
 
+def helium_fraction_columns(history: History) -> dict[str, FloatArray]:
+    """Fractions of helium nuclei under their symbols; nothing where helium is inert."""
+    if history.helium is None:
+        return {}
+    names = "x_HeI", "x_HeII", "x_HeIII"
+    return {name: getattr(history, one) for name, one in zip(names, _FRACTIONS, strict=True)}
+
+
 def helium_rows(history: History) -> list[int]:
     """Outputs nearest to a few redshifts at which He I recombines; each once, ascending."""
     z = history.redshift
@@ -99,6 +107,7 @@ def helium_text(history: History) -> str:
     ends = {"left": np.nan, "right": np.nan}
     half = float(np.interp(0.5, history.neutral_helium_fraction, history.redshift, **ends))
     return (
-        f"half neutral at z = {half:.0f}; hand-over lags {how.handover_departure:.1e} and "
+        ("" if np.isnan(half) else f"half neutral at z = {half:.0f}; ")
+        + f"hand-over lags {how.handover_departure:.1e} and "
         f"{how.handover_ion_departure:.1e}; charge and nuclei to {how.closure_error:.0e}"
     )

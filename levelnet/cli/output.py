@@ -7,11 +7,11 @@ import json
 import math
 from collections.abc import Callable, Sequence
 from pathlib import Path
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING, Any, Literal
 
 from ..constants import SECONDS_PER_YEAR
 from ..quantities import OBSERVABLES
-from .helium_output import helium_line_rows, helium_text, helium_values
+from .helium_output import helium_fraction_columns, helium_line_rows, helium_text, helium_values
 from .line_output import line_rows, line_values
 
 if TYPE_CHECKING:
@@ -109,7 +109,7 @@ def history_values(history: History) -> dict[str, Any]:
     from ..history.samples import sample_rows
 
     marks, how, setup = history.milestones, history.diagnostics, history.setup
-    rows = sample_rows(history.redshift)
+    rows = sample_rows(history.redshift, _atom(history))
     return {
         "title": setup.title,
         "setup_digest": setup.digest,
@@ -160,6 +160,16 @@ def atom_size(setup: Setup) -> str:
     return f"n_max = {n_max}" + (f", whole shells above n = {top}" if top < n_max else "")
 
 
+def _helium_size(setup: Setup) -> str:
+    """Highest n of helium, where it has levels."""
+    return f"helium n_max = {setup.helium.n_max}, " if setup.helium_recombines else ""
+
+
+def _atom(history: History) -> Literal["hydrogen", "both"]:
+    """Whose recombination a summary shows."""
+    return "hydrogen" if history.helium is None else "both"
+
+
 def summary_text(history: History) -> str:
     """Return the summary of a history as lines of plain text."""
     setup = history.setup
@@ -168,7 +178,7 @@ def summary_text(history: History) -> str:
         setup.title or "(no title)",
         row(
             "setup",
-            f"{setup.digest}: hydrogen {atom_size(setup)} ({n_levels} levels), "
+            f"{setup.digest}: hydrogen {atom_size(setup)}, {_helium_size(setup)}{n_levels} levels, "
             f"lines {setup.lines.hydrogen}, z = {history.redshift[0]:g} to "
             f"{history.redshift[-1]:g} ({len(history.redshift)} outputs)",
         ),
@@ -218,13 +228,15 @@ def _milestone_lines(history: History) -> list[str]:
 def _sample_lines(history: History) -> list[str]:
     from ..history.samples import sample_rows
 
-    rows = sample_rows(history.redshift)
-    head = ("z", "x_e", "x_HI", "T_m (K)", "T_r (K)")
+    rows = sample_rows(history.redshift, _atom(history))
+    helium = helium_fraction_columns(history)
+    head = ("z", "x_e", "x_HI", *helium, "T_m (K)", "T_r (K)")
     body = [
         (
             f"{history.redshift[k]:.2f}",
             f"{history.free_electron_fraction[k]:.6e}",
             f"{history.neutral_hydrogen_fraction[k]:.6e}",
+            *(f"{column[k]:.6e}" for column in helium.values()),
             f"{history.matter_temperature_k[k]:.6g}",
             f"{history.radiation_temperature_k[k]:.6g}",
         )

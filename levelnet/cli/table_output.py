@@ -176,7 +176,7 @@ def distilled_summary(history: FastHistory) -> str:
             f"{history.matter_temperature_k[k]:.6g}",
             f"{history.radiation_temperature_k[k]:.6g}",
         )
-        for k in sample_rows(history.redshift)
+        for k in sample_rows(history.redshift, "hydrogen" if history.helium is None else "both")
     ]
     steps = (
         f"{history.n_steps} steps ({history.n_rejected} rejected), from Saha equilibrium at z = "

@@ -161,7 +161,7 @@ class FastHistory:
                 f"{self.free_electron_fraction[k]:.6g}",
                 f"{self.matter_temperature_k[k]:.6g}",
             )
-            for k in sample_rows(self.redshift)
+            for k in sample_rows(self.redshift, "hydrogen" if self.helium is None else "both")
         )
         caption = f"History from effective rates: {self.outcome.value}"
         return html_table(caption, ("z", "x_e", "T_m (K)"), rows)

@@ -348,6 +348,6 @@ class History:
                 f"{self.free_electron_fraction[k]:.6g}",
                 f"{self.matter_temperature_k[k]:.6g}",
             )
-            for k in sample_rows(self.redshift)
+            for k in sample_rows(self.redshift, "hydrogen" if self.helium is None else "both")
         )
         return html_table(repr(self)[1:-1], ("z", "x_e", "T_m (K)"), rows)

@@ -18,10 +18,14 @@ _SAMPLES = {
         *(2000.0, 1900.0, 1800.0, 1700.0, 1600.0),
     ),
 }
+_SAMPLES["both"] = (
+    *(8000.0, 7000.0, 6000.0, 5500.0, 5000.0, 3000.0, 2500.0, 2200.0, 2000.0, 1900.0, 1800.0),
+    *_SAMPLES["hydrogen"],
+)
 
 
 def sample_rows(
-    redshift: FloatArray, atom: Literal["hydrogen", "helium"] = "hydrogen"
+    redshift: FloatArray, atom: Literal["hydrogen", "helium", "both"] = "hydrogen"
 ) -> list[int]:
     """Find the outputs nearest to a few round redshifts.
 
@@ -29,7 +33,7 @@ def sample_rows(
     ----------
     redshift : ndarray, shape (n_redshift,), dimensionless
         Descending.
-    atom : "hydrogen" or "helium"
+    atom : "hydrogen", "helium" or "both"
         Whose recombination they are to show.
 
     Returns

@@ -70,7 +70,7 @@ def _found(history: FastHistory) -> tuple[Block, ...]:
     )
     rows = tuple(
         (f"{history.redshift[k]:.2f}", *(f"{values[k]:{form}}" for values, form in columns))
-        for k in sample_rows(history.redshift)
+        for k in sample_rows(history.redshift, "hydrogen" if history.helium is None else "both")
     )
     head = ("z", "x_e = n_e/n_H", "x_HI", "T_m (K)", "T_r (K)")
     table = Table("The history at some redshifts", head, rows)

@@ -112,7 +112,7 @@ def _samples(history: History) -> Table:
         ]
     rows = tuple(
         (f"{history.redshift[k]:.2f}", *(f"{values[k]:{form}}" for _, values, form in columns))
-        for k in sample_rows(history.redshift)
+        for k in sample_rows(history.redshift, "hydrogen" if history.helium is None else "both")
     )
     return Table("The history at some redshifts", ("z", *(head for head, _, _ in columns)), rows)
 
