@@ -35,8 +35,9 @@ from ..network.coupling import GroundCoupling, with_line_factors
 from ..network.gradient import FlowGradient, FlowSlopes, flow_slopes, net_flow_gradient
 from ..network.reduced import Reduced
 from ..network.solve import solve_kept
-from .helium import Around, HeliumEquations
+from .helium import HeliumEquations
 from .helium import Rates as HeliumRates
+from .ion_network import Around
 from .local import Local
 
 # No variable is ever so large: fractions would leave the doubles.

@@ -38,7 +38,8 @@ from ..numerics.chebyshev import ChebyshevSeries, chebyshev_nodes
 from ..pieces import Pieces, code_digest, content_key
 from ..tables import list_tables
 from .cost import table_tolerance
-from .helium import COLDEST_K, HeliumEquations, IonNetwork
+from .helium import COLDEST_K, HeliumEquations
+from .ion_network import HeliumIon, NeutralHelium
 from .setup import Setup
 
 Tell = Callable[[str, float], None]
@@ -143,7 +144,7 @@ def build_helium(
     lines = helium_lines_of(setup, ladders)
     past = HeliumPast.of(lines) if lines.fed else None
     rate = setup.rates.two_photon_rate_per_s(setup.helium.two_photon_rate_per_s, "He I")
-    first = IonNetwork(
+    first = NeutralHelium(
         with_scales(reduced, factor),
         lines,
         treatment,
@@ -173,7 +174,7 @@ def build_helium(
     gap_ev = float(ion.kept.energy_ev[0])
     rate = setup.rates.two_photon_rate_per_s(two_photon_rate(2), "He II")
     escape = setup.rates.ion_escape_factor()
-    second = IonNetwork(
+    second = HeliumIon(
         with_scales(table, factor),
         _line_of_second(ion, factor),
         Sobolev(),

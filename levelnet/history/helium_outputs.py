@@ -47,7 +47,7 @@ def _moment(
     x, electrons = HeliumEquations.fractions(state[2:]), equations.electron_fraction(state)
     one, scales = atoms.equations.first, atoms.equations.scales
     conditions = as_measured(one.conditions(around, x.single, x.neutral), scales)
-    if around.radiation_temperature_k < atoms.equations.coldest_k:
+    if atoms.equations.held(around.radiation_temperature_k):
         held = [_ground_alone(len(atoms.first.levels), x.neutral)]
         if atoms.second is not None:
             held.append(_ground_alone(len(atoms.second.levels), x.single))
@@ -178,7 +178,7 @@ def _first_flow(
     """Net flow to the ground state of He I by channel, s^-1 per helium nucleus; 0 if held."""
     state = state_at(integrated, log_scale) if state is None else state
     around = integrated.equations.helium_around(log_scale, state)
-    if around.radiation_temperature_k < atoms.equations.coldest_k:
+    if atoms.equations.held(around.radiation_temperature_k):
         return np.zeros(len(atoms.first.kept_position))
     return atoms.equations.first_local(around, state[2:]).solution.flow
 

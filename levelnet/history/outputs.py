@@ -15,7 +15,6 @@ from ..atomic.levels import level_name
 from ..background.quadrature import quadrature
 from ..background.scattering import opacity_per_mpc
 from ..errors import SolveError
-from ..escape.helium_treatment import HeliumTreatment
 from ..network.assembly import (
     FactoredInterior,
     Workspace,
@@ -104,7 +103,6 @@ def assemble_history(setup: Setup, integrated: Integrated, tell: Progress) -> Hi
         )
         figures_of_helium = helium_figures(integrated, atoms, moments, redshift, closure)
         treatment = atoms.equations.first.treatment
-        assert isinstance(treatment, HeliumTreatment)
         warnings += helium_limit_notes(redshift, figures_of_helium.lines, treatment)
     return History(
         setup,
