@@ -111,7 +111,6 @@ def integrate_history(
     helium = None if atoms is None else atoms.equations
     scout = _scout(setup, chosen, helium)
     handover = handover_of(setup, scout)
-    resolved = isinstance(chosen, ResolvedField)
     begin = handover_of_field(setup, scout) if resolved else handover
     if start_above > handover.redshift and not resolved:
         handover = replace(handover, redshift=start_above)
