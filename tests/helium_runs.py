@@ -98,7 +98,7 @@ def run(equations: SlowEquations) -> Trajectory:
     equations.remember(start, state)
     return integrate(
         equations.rate,
-        equations.jacobian,
+        equations.slopes,
         start,
         state,
         [-math.log1p(z) for z in REDSHIFTS],

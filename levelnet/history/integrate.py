@@ -337,7 +337,7 @@ def integrate_slow(
 
     return integrate(
         equations.rate,
-        equations.jacobian,
+        equations.slopes,
         start,
         state,
         outputs,
