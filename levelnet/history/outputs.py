@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable
-from dataclasses import replace
 from typing import NamedTuple
 
 import numpy as np
@@ -22,7 +21,7 @@ from ..network.assembly import (
     interior_photoionization,
 )
 from ..network.populations import LevelPopulations, populations
-from ..network.scaled import as_measured
+from ..network.scaled import as_measured, scaled_levels
 from ..network.tabulation import TabulatedReduction
 from ..numerics.stepping import Trajectory
 from .course import electron_fraction_at, state_at
@@ -182,12 +181,8 @@ def _species(integrated: Integrated, outputs: list[_Output]) -> SpeciesPopulatio
     log_population = np.array([o.levels.log_population for o in outputs])
     population = np.where(log_population < _SMALLEST_LOG, 0.0, np.exp(log_population))
     log_departure = np.array([o.levels.log_departure for o in outputs])
-    ladder, unit = integrated.ladder, integrated.equations.scales.energy
-    levels = replace(
-        ladder.levels,
-        energy_ev=ladder.levels.energy_ev * unit,
-        ionization_energy_ev=ladder.levels.ionization_energy_ev * unit,
-    )
+    ladder = integrated.ladder
+    levels = scaled_levels(ladder.levels, integrated.equations.scales)
     return SpeciesPopulations(ladder.species, levels, population, log_departure)
 
 
