@@ -36,8 +36,9 @@ from ..network.gradient import FlowGradient, FlowSlopes, flow_slopes, net_flow_g
 from ..network.reduced import Reduced
 from ..network.solve import solve_kept
 from ..numerics.stepping import Slopes
-from .helium import Around, HeliumEquations
+from .helium import HeliumEquations
 from .helium import Rates as HeliumRates
+from .ion_network import Around
 from .local import Local
 
 # No variable is ever so large: fractions would leave the doubles.

@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable
-from dataclasses import replace
 from functools import partial
 from typing import NamedTuple
 
@@ -17,7 +16,6 @@ from ..background.conditions import Conditions
 from ..background.quadrature import quadrature
 from ..background.scattering import opacity_per_mpc
 from ..errors import SolveError
-from ..escape.helium_treatment import HeliumTreatment
 from ..network.assembly import (
     FactoredInterior,
     Workspace,
@@ -25,7 +23,7 @@ from ..network.assembly import (
     interior_photoionization,
 )
 from ..network.populations import LevelPopulations, populations
-from ..network.scaled import as_measured
+from ..network.scaled import as_measured, scaled_levels
 from ..network.tabulation import TabulatedReduction
 from ..numerics.stepping import Trajectory
 from ..pieces import Pieces
@@ -109,7 +107,6 @@ def assemble_history(
         closure = closure_error(integrated.equations, electron_fraction, hydrogen, helium)
         figures_of_helium = helium_figures(integrated, atoms, moments, redshift, closure)
         treatment = atoms.equations.first.treatment
-        assert isinstance(treatment, HeliumTreatment)
         warnings += helium_limit_notes(redshift, figures_of_helium.lines, treatment)
     return History(
         setup,
@@ -237,12 +234,8 @@ def _species(integrated: Integrated, outputs: list[_Output]) -> SpeciesPopulatio
     log_population = np.array([o.levels.log_population for o in outputs])
     population = np.where(log_population < _SMALLEST_LOG, 0.0, np.exp(log_population))
     log_departure = np.array([o.levels.log_departure for o in outputs])
-    ladder, unit = integrated.ladder, integrated.equations.scales.energy
-    levels = replace(
-        ladder.levels,
-        energy_ev=ladder.levels.energy_ev * unit,
-        ionization_energy_ev=ladder.levels.ionization_energy_ev * unit,
-    )
+    ladder = integrated.ladder
+    levels = scaled_levels(ladder.levels, integrated.equations.scales)
     return SpeciesPopulations(ladder.species, levels, population, log_departure)
 
 

@@ -265,14 +265,6 @@ class Setup:
         """Whether helium is among the slow variables: it has levels, and there is some."""
         return self.helium.n_max > 0 and self.cosmology.helium_ratio() > 0.0
 
-    def require_inert_helium(self, who: str) -> None:
-        """Raise InputError, which names `who` asks, where helium recombines."""
-        if self.helium_recombines:
-            raise InputError(
-                f"helium.n_max = {self.helium.n_max}: {who} knows hydrogen alone; allowed there is "
-                "0 (helium neutral and inert)"
-            )
-
     @property
     def frequency_step(self) -> float:
         """Width of the cells of a resolved field in ln nu (dimensionless), asked or chosen."""
