@@ -10,7 +10,7 @@ from typing import TYPE_CHECKING, Any
 
 from ..atomic.helium_levels import HeliumLevels
 from ..atomic.levels import LevelSet
-from ..errors import FileFormatError, InputError, LevelnetError
+from ..errors import FileFormatError, InputError
 from ..history.helium_record import HeliumFigures
 from ..history.line_figures import LineFigures
 from ..history.result import (
@@ -23,9 +23,10 @@ from ..history.result import (
 )
 from ..history.setup import parse_setup
 from . import layout
+from .apart import identity, load_apart
 from .digest import content_digest, seal_fault
 from .escape_layout import ESCAPE_LAYOUT
-from .hdf5 import Damage, load
+from .hdf5 import Damage
 from .level_layout import LEVEL_LAYOUT
 from .parts import all_fields, fields_of, outcome_of
 from .schema import Content, Layout
@@ -94,20 +95,17 @@ def read_attributes(path: str | Path) -> dict[str, str | int]:
 
 
 def read_content(path: str | Path) -> Content:
-    """Read all that a file says and hold it against layout and digest."""
+    """Read all that a file says and hold it against seal, layout and digest."""
     place = Path(path)
-    _check_bytes(place)
+    checked = _check_bytes(place)
     try:
-        content = load(place, (kind for kind, _ in _MAKERS.values()))
-    except LevelnetError:
-        raise
+        content = load_apart(place, checked)
     except Damage as error:
         raise FileFormatError(f"{path}: damaged: {_line(error)}") from None
+    except FileFormatError as error:
+        raise FileFormatError(f"{path}: {_line(error)}") from None
     except MemoryError:
         raise FileFormatError(f"{path}: larger than the memory of this machine") from None
-    except Exception as error:
-        # Over damaged bytes h5py raises nearly any kind of exception.
-        raise FileFormatError(f"{path}: damaged: {_line(error)}") from error
     if content.attributes["digest"] != content_digest(content):
         raise FileFormatError(f"{path}: damaged: the content does not have the digest it states")
     return content
@@ -119,8 +117,8 @@ def _line(error: Exception) -> str:
     return "".join(letter if letter.isprintable() else "?" for letter in text[:300])
 
 
-def _check_bytes(path: Path) -> None:
-    """Refuse what is no file, not HDF5 or damaged, without handing it to HDF5."""
+def _check_bytes(path: Path) -> list[int]:
+    """Refuse what is no file, not HDF5 or damaged, without handing it to HDF5; return which."""
     try:
         # Opening a pipe would wait for a writer, so the kind is asked first.
         if not stat.S_ISREG(os.stat(path).st_mode):
@@ -128,11 +126,15 @@ def _check_bytes(path: Path) -> None:
         with open(path, "rb") as raw:
             is_hdf5 = raw.read(len(_HDF5_SIGNATURE)) == _HDF5_SIGNATURE
             fault = seal_fault(raw) if is_hdf5 else "not an HDF5 file"
+            checked = identity(os.fstat(raw.fileno()))
     except (OSError, ValueError) as error:
+        if isinstance(error, FileFormatError):
+            raise
         reason = (error.strerror if isinstance(error, OSError) else None) or str(error)
         raise FileFormatError(f"{path}: cannot be read: {reason}") from None
     if fault:
         raise FileFormatError(f"{path}: {fault}")
+    return checked
 
 
 def history_of(content: Content) -> History:
@@ -211,3 +213,6 @@ _MAKERS: dict[str, tuple[Layout, Callable[[Content], Record]]] = {
     LEVEL_LAYOUT.name: (LEVEL_LAYOUT, level_study_of),
     ESCAPE_LAYOUT.name: (ESCAPE_LAYOUT, escape_study_of),
 }
+
+LAYOUTS = tuple(kind for kind, _ in _MAKERS.values())
+"""Kinds of files that are known."""
