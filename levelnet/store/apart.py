@@ -27,10 +27,15 @@ from .schema import Content, Stored
 # What a file may hold: 1 GiB, or a hundred times its size. Deflate can shrink a thousandfold what
 # says nothing; numbers of a calculation shrink to half.
 _MOST_BYTES, _MOST_EXPANDED = 1 << 30, 100
-_PROGRAM = (
-    "import json, sys; sys.path[:] = json.loads(sys.stdin.buffer.readline());"
-    " from levelnet.store.reader_process import main; main()"
-)
+# An empty package stands for levelnet.store there: the rest of it would triple the start-up time.
+_PROGRAM = f"""
+import json, sys, types
+sys.path[:] = json.loads(sys.stdin.buffer.readline())
+package = sys.modules["{__package__}"] = types.ModuleType("{__package__}")
+package.__path__ = json.loads(sys.stdin.buffer.readline())
+from {__package__}.reader_process import main
+main()
+"""
 
 
 def load_apart(path: Path, identity: list[int]) -> Content:
@@ -83,6 +88,7 @@ class _Process:
             ) from None
         self.at_rest = True
         self._say(sys.path)
+        self._say([str(Path(__file__).parent)])
 
     @property
     def alive(self) -> bool:

@@ -213,6 +213,3 @@ _MAKERS: dict[str, tuple[Layout, Callable[[Content], Record]]] = {
     LEVEL_LAYOUT.name: (LEVEL_LAYOUT, level_study_of),
     ESCAPE_LAYOUT.name: (ESCAPE_LAYOUT, escape_study_of),
 }
-
-LAYOUTS = tuple(kind for kind, _ in _MAKERS.values())
-"""Kinds of files that are known."""

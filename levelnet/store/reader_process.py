@@ -19,7 +19,7 @@ from typing import Any, BinaryIO
 from ..errors import FileFormatError
 from .apart import identity
 from .hdf5 import Damage, Piece, load
-from .read import LAYOUTS
+from .kinds import LAYOUTS
 
 # Beside the file itself: Python, the libraries, one slab and its chunks.
 _ROOM_BYTES = 1 << 30
