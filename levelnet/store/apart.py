@@ -15,10 +15,12 @@ import signal
 import subprocess
 import sys
 import threading
+from io import BufferedReader
 from pathlib import Path
-from typing import IO, Any
+from typing import Any, cast
 
 import numpy as np
+from numpy.typing import NDArray
 
 from ..errors import FileFormatError
 from .hdf5 import Damage
@@ -102,7 +104,7 @@ class _Process:
         room = max(_MOST_BYTES, _MOST_EXPANDED * size)
         while "end" not in (head := self._head(size)):
             if "variable" in head:
-                stored = self._stored(head, room)
+                stored = self._stored(head, room, size)
                 content.variables[head["variable"]] = stored
                 if not isinstance(stored.values, tuple):
                     room -= stored.values.nbytes
@@ -130,10 +132,15 @@ class _Process:
             raise FileFormatError(head["foreign"]) if "foreign" in head else Damage(head["damage"])
         return head
 
-    def _stored(self, head: dict[str, Any], room: int) -> Stored:
+    def _stored(self, head: dict[str, Any], room: int, file_size: int) -> Stored:
         dimensions = tuple(head["dimensions"])
         if "texts" in head:
             return Stored(dimensions, head["attributes"], tuple(head["texts"]))
+        values = self._numbers(head, room, file_size)
+        return Stored(dimensions, head["attributes"], values)
+
+    def _numbers(self, head: dict[str, Any], room: int, file_size: int) -> NDArray[Any]:
+        """Take an array, slab by slab; a complaint may come between any two."""
         kind, shape = np.dtype(head["type"]), tuple(head["shape"])
         declared = math.prod(shape) * kind.itemsize
         if declared > room:
@@ -141,16 +148,15 @@ class _Process:
         values = np.empty(shape, kind)
         view = values.reshape(-1).view(np.uint8).data
         while view:
-            count = self._answers.readinto(view)  # type: ignore[attr-defined]
-            if not count:
+            slab = view[: self._head(file_size)["bytes"]]
+            if self._answers.readinto(slab) < len(slab):
                 raise Damage(self._last_words())
-            view = view[count:]
-        return Stored(dimensions, head["attributes"], values)
+            view = view[len(slab) :]
+        return values
 
     @property
-    def _answers(self) -> IO[bytes]:
-        assert self._process.stdout is not None
-        return self._process.stdout
+    def _answers(self) -> BufferedReader:
+        return cast(BufferedReader, self._process.stdout)
 
     def _last_words(self) -> str:
         self.end()

@@ -235,7 +235,9 @@ def path_name(path: str) -> bytes:
 
 def _numbers(dataset: h5py.Dataset) -> Iterator[bytes]:
     """Read the numbers in order, not much more than `_SLAB_BYTES` at a time."""
-    if not dataset.shape or 0 in dataset.shape:
+    if dataset.size == 0:
+        return
+    if not dataset.shape:
         yield dataset[()].tobytes()
         return
     per_row = dataset.size // dataset.shape[0] * dataset.dtype.itemsize

@@ -58,16 +58,21 @@ def _answer(asked: dict[str, Any], answers: BinaryIO) -> None:
     except Exception as error:
         # Over damaged bytes h5py raises nearly any kind of exception.
         end = {"damage": str(error) or type(error).__name__}
-    answers.write(json.dumps(end).encode() + b"\n")
+    _say(end, answers)
     answers.flush()
 
 
 def _send(piece: Piece, answers: BinaryIO) -> None:
-    answers.write(json.dumps(piece.head).encode() + b"\n")
+    _say(piece.head, answers)
     for numbers in piece.numbers:
-        _more_time()
+        _say({"bytes": len(numbers)}, answers)
         answers.write(numbers)
+        _more_time()
     _more_time()
+
+
+def _say(what: dict[str, Any], answers: BinaryIO) -> None:
+    answers.write(json.dumps(what).encode() + b"\n")
 
 
 def _more_time() -> None:
