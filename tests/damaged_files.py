@@ -159,17 +159,23 @@ def _with_attribute(file: h5py.File, at: random.Random) -> tuple[Any, str]:
 
 def attribute_renamed(file: h5py.File, at: random.Random) -> None:
     holder, name = _with_attribute(file, at)
-    other = at.choice(("x", name.upper(), name + "\0x", "\u2028", "../x", "y" * 60_000))
-    try:
-        holder.attrs.rename(name, other)
-    except (ValueError, RuntimeError, OSError):
+    other = at.choice(("x", name.upper(), name + "\0", "\u2028", "../x", "y" * 60_000))
+    if other.encode() in [one.encode() for one in holder.attrs] or "\0" in other:
         del holder.attrs[name]
+    else:
+        h5py.h5a.rename(holder.id, name.encode(), other.encode())
 
 
 def attribute_of_another_value(file: h5py.File, at: random.Random) -> None:
     holder, name = _with_attribute(file, at)
-    kelvin = at.choice(("K", "s", "km", "1e3 K", "", "\x1b[2J", "\n", "x" * 50_000, "\udcff"))
-    holder.attrs[name] = kelvin
+    text = at.choice(("K", "s", "km", "1e3 K", "", "\x1b[2J", "\n", "x" * 50_000))
+    holder.attrs[name] = text
+
+
+def attribute_no_text(file: h5py.File, at: random.Random) -> None:
+    """Bytes that are no UTF-8 where text stands."""
+    holder, name = _with_attribute(file, at)
+    holder.attrs.create(name, b"\xff\xfe", dtype=h5py.string_dtype())
 
 
 def attribute_of_another_type(file: h5py.File, at: random.Random) -> None:
@@ -196,8 +202,9 @@ def attribute_of_references(file: h5py.File, at: random.Random) -> None:
 def attribute_of_sequences(file: h5py.File, at: random.Random) -> None:
     holder, name = _with_attribute(file, at)
     del holder.attrs[name]
-    kind = h5py.vlen_dtype(np.dtype("f8"))
-    holder.attrs.create(name, np.zeros(4), shape=(), dtype=kind)
+    values = np.empty(2, object)
+    values[:] = [np.zeros(4), np.zeros(9)]
+    holder.attrs.create(name, values, dtype=h5py.vlen_dtype(np.dtype("f8")))
 
 
 def attribute_added(file: h5py.File, at: random.Random) -> None:
@@ -381,6 +388,7 @@ def stored_elsewhere(file: h5py.File, at: random.Random) -> None:
 HDF5: tuple[Callable[[h5py.File, random.Random], None], ...] = (
     *(attribute_renamed, attribute_of_another_value, attribute_of_another_type, attribute_lost),
     *(attribute_of_references, attribute_of_sequences, attribute_added, attributes_by_the_hundred),
+    attribute_no_text,
     *(value_changed, value_changed, rescaled, another_type, another_shape, huge, bomb, link, link),
     *(other_filter, cycle, one_for_another, deep, lost, renamed, committed, another_kind),
     stored_elsewhere,

@@ -160,7 +160,7 @@ class _Process:
 
     def _last_words(self) -> str:
         self.end()
-        if self._process.returncode == -getattr(signal, "SIGXCPU", 0):
+        if self._process.returncode == -getattr(signal, "SIGPROF", 0):
             return "HDF5 does not come to an end over it"
         return "HDF5 does not survive reading it"
 

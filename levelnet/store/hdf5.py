@@ -20,7 +20,7 @@ if TYPE_CHECKING:
 
 # Deflate cannot shrink more than 1032 to 1 (RFC 1951: 258 bytes from two bits), and some room.
 _MOST_COMPRESSED = 1100
-_SLAB_BYTES = 1 << 26
+_SLAB_BYTES = 1 << 24
 # What HDF5 itself attaches to datasets with named dimensions.
 _MACHINERY = frozenset({"CLASS", "NAME", "DIMENSION_LIST", "REFERENCE_LIST"})
 

@@ -12,7 +12,6 @@ import json
 import os
 import signal
 import sys
-import time
 from pathlib import Path
 from typing import Any, BinaryIO
 
@@ -24,8 +23,9 @@ from .kinds import LAYOUTS
 # Beside the file itself: Python, the libraries, one slab and its chunks.
 _ROOM_BYTES = 1 << 30
 _PER_FILE_BYTE = 2
-# Of the processor, for one slab of numbers or one group's structure.
-_PATIENCE_S = 4
+# Seconds of the processor from one piece or slab to the next, and more for a large file.
+_PATIENCE_S = 1.0
+_PER_BYTE_S = 1e-7
 
 
 def main() -> None:
@@ -42,14 +42,16 @@ def main() -> None:
 
 def _answer(asked: dict[str, Any], answers: BinaryIO) -> None:
     """Send a file, and how that ended: "end", "foreign" or "damage" with the reason."""
-    _limit("RLIMIT_AS", _ROOM_BYTES + _PER_FILE_BYTE * asked["identity"][2])
+    size = asked["identity"][2]
+    _limit("RLIMIT_AS", _ROOM_BYTES + _PER_FILE_BYTE * size)
+    patience_s = _PATIENCE_S + _PER_BYTE_S * size
     try:
         with open(Path(asked["path"]), "rb") as stream:
             if identity(os.fstat(stream.fileno())) != asked["identity"]:
                 raise Damage("replaced while it was read")
-            _more_time()
+            _alarm(patience_s)
             for piece in load(stream, LAYOUTS):
-                _send(piece, answers)
+                _send(piece, answers, patience_s)
         end = {"end": ""}
     except FileFormatError as error:
         end = {"foreign": str(error)}
@@ -58,26 +60,29 @@ def _answer(asked: dict[str, Any], answers: BinaryIO) -> None:
     except Exception as error:
         # Over damaged bytes h5py raises nearly any kind of exception.
         end = {"damage": str(error) or type(error).__name__}
+    _alarm(0.0)
     _say(end, answers)
     answers.flush()
 
 
-def _send(piece: Piece, answers: BinaryIO) -> None:
+def _send(piece: Piece, answers: BinaryIO, patience_s: float) -> None:
     _say(piece.head, answers)
     for numbers in piece.numbers:
         _say({"bytes": len(numbers)}, answers)
         answers.write(numbers)
-        _more_time()
-    _more_time()
+        _alarm(patience_s)
+    _alarm(patience_s)
 
 
 def _say(what: dict[str, Any], answers: BinaryIO) -> None:
     answers.write(json.dumps(what).encode() + b"\n")
 
 
-def _more_time() -> None:
-    # By the clock of the processor: a slow disk is no reason to give up.
-    _limit("RLIMIT_CPU", int(time.process_time()) + 1 + _PATIENCE_S)
+def _alarm(after_s: float) -> None:
+    """Let this process be killed when it has used that much of the processor; 0: never."""
+    # By its clock, since a slow disk is no reason to give up.
+    if hasattr(signal, "setitimer"):
+        signal.setitimer(signal.ITIMER_PROF, after_s)
 
 
 def _limit(name: str, most: int) -> None:
