@@ -19,8 +19,14 @@ _PATIENCE_S = 2.0  # shorter work needs no bar
 
 
 def one_line(text: str) -> str:
-    """Fold `text` into one line."""
-    return " ".join(text.split())
+    """Fold `text` into one line; what a terminal could obey is shown and not sent."""
+    return "".join(_shown(letter) for letter in " ".join(text.split()))
+
+
+def _shown(letter: str) -> str:
+    # Half a surrogate stands for a byte of a file name; the stream itself knows what to do with it.
+    harmless = letter.isprintable() or 0xDC80 <= ord(letter) <= 0xDCFF
+    return letter if harmless else letter.encode("unicode_escape").decode("ascii")
 
 
 class Console:

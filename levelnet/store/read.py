@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import os
-import stat
 from collections.abc import Callable
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -22,6 +21,7 @@ from ..history.result import (
     SpeciesPopulations,
 )
 from ..history.setup import parse_setup
+from ..texts import opened
 from . import layout
 from .apart import identity, load_apart
 from .digest import content_digest, seal_fault
@@ -120,18 +120,14 @@ def _line(error: Exception) -> str:
 def _check_bytes(path: Path) -> list[int]:
     """Refuse what is no file, not HDF5 or damaged, without handing it to HDF5; return which."""
     try:
-        # Opening a pipe would wait for a writer, so the kind is asked first.
-        if not stat.S_ISREG(os.stat(path).st_mode):
-            raise FileFormatError(f"{path}: cannot be read: not a plain file")
-        with open(path, "rb") as raw:
+        with opened(path) as raw:
             is_hdf5 = raw.read(len(_HDF5_SIGNATURE)) == _HDF5_SIGNATURE
             fault = seal_fault(raw) if is_hdf5 else "not an HDF5 file"
             checked = identity(os.fstat(raw.fileno()))
-    except (OSError, ValueError) as error:
-        if isinstance(error, FileFormatError):
-            raise
-        reason = (error.strerror if isinstance(error, OSError) else None) or str(error)
-        raise FileFormatError(f"{path}: cannot be read: {reason}") from None
+    except InputError as error:
+        raise FileFormatError(str(error)) from None
+    except OSError as error:
+        raise FileFormatError(f"{path}: cannot be read: {error.strerror or error}") from None
     if fault:
         raise FileFormatError(f"{path}: {fault}")
     return checked
