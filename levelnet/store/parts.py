@@ -5,6 +5,7 @@ from __future__ import annotations
 from typing import Any
 
 from ..errors import FileFormatError, Outcome
+from ..history.setup import Setup, parse_setup
 from . import layout
 from .schema import Content, Group, Layout
 
@@ -15,6 +16,11 @@ def outcome_of(content: Content) -> Outcome:
     if outcome not in Outcome.__members__:
         raise FileFormatError(f'outcome "{outcome}" is not known to this levelnet')
     return Outcome[outcome]
+
+
+def setup_of(content: Content) -> Setup:
+    """Setup of the run that a file is from; InputError where it names another file."""
+    return parse_setup(str(content.attributes["setup"]), "stored setup", with_files=False)
 
 
 def all_fields(content: Content, kind: Layout) -> dict[str, Any]:

@@ -20,7 +20,6 @@ from ..history.result import (
     RadiationField,
     SpeciesPopulations,
 )
-from ..history.setup import parse_setup
 from ..texts import opened
 from . import layout
 from .apart import identity, load_apart
@@ -28,7 +27,7 @@ from .digest import content_digest, seal_fault
 from .escape_layout import ESCAPE_LAYOUT
 from .hdf5 import Damage
 from .level_layout import LEVEL_LAYOUT
-from .parts import all_fields, fields_of, outcome_of
+from .parts import all_fields, fields_of, outcome_of, setup_of
 from .schema import Content, Layout
 from .study_makers import escape_study_of, level_study_of, weighing_of
 from .table_layout import DISTILLED_LAYOUT, TABLE_LAYOUT
@@ -148,7 +147,7 @@ def history_of(content: Content) -> History:
         parts |= fields
     field, helium = parts.pop("field", None), parts.pop("helium", None)
     return History(
-        setup=parse_setup(str(content.attributes["setup"]), "stored setup"),
+        setup=setup_of(content),
         outcome=outcome_of(content),
         species=tuple(populations),
         channels=Channels(**parts.pop("channels")),
@@ -194,7 +193,7 @@ def table_of(content: Content) -> EffectiveTable:
         raise FileFormatError("levels: their number differs from that of the table")
     certificate = parts.pop("certificate", None)
     return EffectiveTable(
-        setup=parse_setup(str(content.attributes["setup"]), "stored setup"),
+        setup=setup_of(content),
         kept=kept,
         certificate=None if certificate is None else Certificate(**certificate),
         **parts,

@@ -7,10 +7,9 @@ from typing import TYPE_CHECKING, Any
 from ..atomic.levels import LevelSet
 from ..errors import FileFormatError
 from ..history.result import Channels, RadiationField
-from ..history.setup import parse_setup
 from .escape_layout import ESCAPE_LAYOUT
 from .level_layout import LEVEL_LAYOUT
-from .parts import all_fields, outcome_of
+from .parts import all_fields, outcome_of, setup_of
 from .schema import Content
 from .weighing_layout import WEIGHING_LAYOUT
 
@@ -32,7 +31,7 @@ def weighing_of(content: Content) -> Weighing:
             raise FileFormatError(f"{name}: names levels that are not in the file")
     budget = parts.pop("budget", None)
     return Weighing(
-        setup=parse_setup(str(content.attributes["setup"]), "stored setup"),
+        setup=setup_of(content),
         outcome=outcome_of(content),
         levels=levels,
         budget=None if budget is None else ErrorBudget(**budget),
@@ -59,7 +58,7 @@ def level_study_of(content: Content) -> LevelStudy:
     held, resolved = parts.pop("held_out", None), parts.pop("resolved", None)
     question = parts.pop("question", None)
     return LevelStudy(
-        setup=parse_setup(str(content.attributes["setup"]), "stored setup"),
+        setup=setup_of(content),
         outcome=outcome_of(content),
         rungs=Rungs(**parts.pop("rungs")),
         limit=estimates(parts.pop("limit")),
@@ -79,7 +78,7 @@ def escape_study_of(content: Content) -> EscapeStudy:
     parts = all_fields(content, ESCAPE_LAYOUT)
     field, question = parts.pop("field", None), parts.pop("question", None)
     return EscapeStudy(
-        setup=parse_setup(str(content.attributes["setup"]), "stored setup"),
+        setup=setup_of(content),
         outcome=outcome_of(content),
         variants=Variants(**parts.pop("variants")),
         switches=Switches(**parts.pop("switches")),
