@@ -63,7 +63,8 @@ def load(stream: BinaryIO, layouts: Iterable[Layout]) -> Iterator[Piece]:
 
     with h5py.File(stream, "r") as file:
         chosen = _layout_of(file, layouts)
-        yield Piece({"attributes": _attributes(file, chosen.attributes, "")})
+        attributes = _attributes(file, chosen.attributes, "")
+        yield Piece({"attributes": attributes})
         known = {one.name: one for one in (*chosen.required, *chosen.optional)}
         required = [one.name for one in chosen.required]
         for name in _members(file, "", known, required):
