@@ -19,14 +19,19 @@ _PATIENCE_S = 2.0  # shorter work needs no bar
 
 
 def one_line(text: str) -> str:
-    """Fold `text` into one line; what a terminal could obey is shown and not sent."""
-    return "".join(_shown(letter) for letter in " ".join(text.split()))
+    """Fold `text` into one line, as :func:`harmless`."""
+    return harmless(" ".join(text.split()))
+
+
+def harmless(text: str) -> str:
+    """Show what a terminal could obey by its code in place of sending it; lines stay lines."""
+    return "".join(_shown(letter) for letter in text)
 
 
 def _shown(letter: str) -> str:
     # Half a surrogate stands for a byte of a file name; the stream itself knows what to do with it.
-    harmless = letter.isprintable() or 0xDC80 <= ord(letter) <= 0xDCFF
-    return letter if harmless else letter.encode("unicode_escape").decode("ascii")
+    fine = letter.isprintable() or letter == "\n" or 0xDC80 <= ord(letter) <= 0xDCFF
+    return letter if fine else letter.encode("unicode_escape").decode("ascii")
 
 
 class Console:

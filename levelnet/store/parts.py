@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping, Sequence
 from typing import Any
 
 from ..errors import FileFormatError, Outcome
@@ -21,6 +22,13 @@ def outcome_of(content: Content) -> Outcome:
 def setup_of(content: Content) -> Setup:
     """Setup of the run that a file is from; InputError where it names another file."""
     return parse_setup(str(content.attributes["setup"]), "stored setup", with_files=False)
+
+
+def check_positions(parts: Mapping[str, Any], names: Sequence[str], count: int) -> None:
+    """Raise FileFormatError where an array of `parts` names a level that is none of `count`."""
+    for name in names:
+        if len(parts[name]) and not 0 <= parts[name].min() <= parts[name].max() < count:
+            raise FileFormatError(f"{name}: names levels that are not in the file")
 
 
 def all_fields(content: Content, kind: Layout) -> dict[str, Any]:

@@ -27,7 +27,7 @@ from .digest import content_digest, seal_fault
 from .escape_layout import ESCAPE_LAYOUT
 from .hdf5 import Damage
 from .level_layout import LEVEL_LAYOUT
-from .parts import all_fields, fields_of, outcome_of, setup_of
+from .parts import all_fields, check_positions, fields_of, outcome_of, setup_of
 from .schema import Content, Layout
 from .study_makers import escape_study_of, level_study_of, weighing_of
 from .table_layout import DISTILLED_LAYOUT, TABLE_LAYOUT
@@ -191,6 +191,7 @@ def table_of(content: Content) -> EffectiveTable:
     kept = KeptLevels(**parts.pop("kept"))
     if parts["equilibrium"].shape[1] != len(kept):
         raise FileFormatError("levels: their number differs from that of the table")
+    check_positions(parts, ("lower", "upper"), len(kept))
     certificate = parts.pop("certificate", None)
     return EffectiveTable(
         setup=setup_of(content),

@@ -9,7 +9,7 @@ from ..errors import FileFormatError
 from ..history.result import Channels, RadiationField
 from .escape_layout import ESCAPE_LAYOUT
 from .level_layout import LEVEL_LAYOUT
-from .parts import all_fields, outcome_of, setup_of
+from .parts import all_fields, check_positions, outcome_of, setup_of
 from .schema import Content
 from .weighing_layout import WEIGHING_LAYOUT
 
@@ -26,9 +26,7 @@ def weighing_of(content: Content) -> Weighing:
 
     parts = all_fields(content, WEIGHING_LAYOUT)
     levels = LevelSet(**parts.pop("levels"))
-    for name in ("upper", "lower", "line_upper"):
-        if len(parts[name]) and not 0 <= parts[name].min() <= parts[name].max() < len(levels):
-            raise FileFormatError(f"{name}: names levels that are not in the file")
+    check_positions(parts, ("upper", "lower", "line_upper"), len(levels))
     budget = parts.pop("budget", None)
     return Weighing(
         setup=setup_of(content),
@@ -55,6 +53,11 @@ def level_study_of(content: Content) -> LevelStudy:
         return Estimates(**{name: Estimate(**one) for name, one in given.items()})
 
     parts = all_fields(content, LEVEL_LAYOUT)
+    ladder, low = parts["rungs"]["n_max"], parts["level_n"]
+    if len(ladder) == 0 or ladder[0] < 1 or not (ladder[1:] > ladder[:-1]).all():
+        raise FileFormatError("n_max: must ascend from 1 or above")
+    if len(low) == 0 or low.min() < 1:
+        raise FileFormatError("n: must be 1 or above")
     held, resolved = parts.pop("held_out", None), parts.pop("resolved", None)
     question = parts.pop("question", None)
     return LevelStudy(

@@ -19,12 +19,15 @@ import pytest
 from hypothesis import example, given
 from hypothesis import strategies as st
 
+from levelnet.cli.main import main
 from levelnet.errors import FileFormatError
 from levelnet.store import layout, read, write
 from levelnet.store.digest import content_digest, seal
 from levelnet.store.read import read_content
 from levelnet.store.schema import Content, Stored
 from tests.invented_history import history_with_field, invented_history
+from tests.invented_weighing import invented_weighing
+from tests.small_tables import small_table
 
 WRITE = sys.modules[write.__module__]  # its name in the package is that of the function
 SEAL_LENGTH = 82  # a line feed, "levelnet sha256 ", 64 digits, a line feed
@@ -410,3 +413,34 @@ def test_records_must_fit_together(folder: Path) -> None:
             content.variables[path] = other.variables[path]
     save_with_right_digest(content, folder / "fit.h5")
     assert "redshift of group lines differs" in refusal(folder / "fit.h5")
+
+
+@pytest.mark.parametrize(
+    ("make", "path", "value", "reason"),
+    [
+        (small_table, "pairs/lower", -(2**63), "lower: names levels that are not in the file"),
+        (small_table, "pairs/upper", 99, "upper: names levels that are not in the file"),
+        (invented_weighing, "weighing/line_upper", -1, "line_upper: names levels that are not"),
+    ],
+)
+def test_positions_must_be_those_of_levels(
+    make: Callable[[], Any], path: str, value: int, reason: str, folder: Path
+) -> None:
+    content = WRITE.content_of(make())
+    path = next(one for one in content.variables if one.endswith(path.split("/")[1]))
+    stored: Any = content.variables[path]
+    numbers = np.full_like(stored.values, value)
+    content.variables[path] = dataclasses.replace(stored, values=numbers)
+    save_with_right_digest(content, folder / "positions.h5")
+    assert reason in refusal(folder / "positions.h5")
+
+
+def test_what_a_terminal_could_obey_is_shown_and_not_sent(
+    folder: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    notes = ("\x1b]0;owned\x07\x1b[2J", "\u202egpj.exe")
+    write(dataclasses.replace(invented_history(), notes=notes), folder / "notes.h5")
+    assert main(["show", str(folder / "notes.h5")]) == 0
+    out = capsys.readouterr().out
+    assert "\\x1b]0;owned\\x07" in out
+    assert all(letter.isprintable() or letter == "\n" for letter in out)
