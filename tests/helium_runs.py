@@ -92,7 +92,7 @@ def saha_state(equations: SlowEquations, redshift: float) -> np.ndarray:
 def run(equations: SlowEquations) -> Trajectory:
     """From Saha equilibrium at z = 3500 through REDSHIFTS."""
     assert equations.helium is not None
-    start, past = -math.log1p(3500.0), equations.helium.past
+    start = -math.log1p(3500.0)
     state = saha_state(equations, 3500.0)
     equations.remember(start, state)
     return integrate(
@@ -105,7 +105,7 @@ def run(equations: SlowEquations) -> Trajectory:
         first_step=1e-4,
         max_steps=20000,
         on_step=equations.remember,
-        longest_step=math.inf if past is None else past.longest_step,
+        longest_step=equations.longest_step,
     )
 
 

@@ -92,7 +92,9 @@ class Quadrature:
     def to_end_from(self, values: FloatArray, log_scale: FloatArray) -> FloatArray:
         """Integral from each s = `log_scale` on the panels to the last edge, same shape (n,)."""
         panel = self._panel(log_scale)
-        return np.asarray(self.to_end(values)[panel] - self.curve(values, log_scale, -1))
+        left = self.to_end(values)[panel] - self.curve(values, log_scale, -1)
+        # Rounding would leave something at the end itself.
+        return np.where(log_scale >= self.edges[-1], 0.0, left)
 
     def curve(self, values: FloatArray, log_scale: FloatArray, order: int = 0) -> FloatArray:
         """Function at each s = `log_scale` on the panels, shape (n,); orders as in `at`."""

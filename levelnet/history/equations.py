@@ -202,11 +202,13 @@ class SlowEquations:
     def _blue_side(self, log_scale: float, around: Background) -> BlueSide | None:
         return None if self.past is None else self.past.blue_side(log_scale, around.hubble_slope)
 
-    @property
-    def longest_step(self) -> float:
-        """No step in ln a may be longer, or its end would need what lies inside it."""
-        pasts = self.past, None if self.helium is None else self.helium.past
-        return min((one.longest_step for one in pasts if one is not None), default=math.inf)
+    def longest_step(self, log_scale: float) -> float:
+        """No step from here in ln a may be longer, or its end would need what lies inside it."""
+        own = math.inf if self.past is None else self.past.longest_step
+        if self.helium is None:
+            return own
+        radiation_k = self.cosmology.radiation_temperature_k(math.expm1(-log_scale))
+        return min(own, self.helium.longest_step(float(radiation_k)))
 
     def remember(self, log_scale: float, state: FloatArray) -> None:
         """Keep what an accepted step sends to the lines below, if the treatment asks for it."""

@@ -41,6 +41,8 @@ COLDEST_K = 1400.0
 # Pull to Saha equilibrium in Hubble rates, and ln of x_HeIII/x_HeII between which it takes over
 # from the levels of He II, which would only ask for short steps.
 _PULL, _GONE, _FADING = 1e9, -50.0, -40.0
+# An ion whose share has this ln may be less exact, by a factor whose ln is at most the second.
+_RARE, _SLACK = math.log(1e-6), math.log(1e3)
 # From so far above COLDEST_K, in ln T_r, rates fade to nothing.
 _EBB = 0.05
 ION_WEIGHT = 2.0  # of He+ in its ground state
@@ -322,6 +324,22 @@ class HeliumEquations:
         if isinstance(self.first.treatment, HeliumTreatment) and self.first.treatment.absorbs:
             depth = continuum_depth(self.past.lines, hydrogen_cm3, around.hubble_rate_per_s)
         return Seen(hydrogen_cm3, self.past.blue_side(around.log_scale, around.hubble_slope, depth))
+
+    def longest_step(self, radiation_temperature_k: float) -> float:
+        """No step in ln a from here may be longer, while one line lights another."""
+        if self.past is None or radiation_temperature_k < COLDEST_K:
+            return math.inf
+        return self.past.longest_step
+
+    @staticmethod
+    def slack(state: FloatArray) -> FloatArray:
+        """By how much a and b may be less exact than u, for an ion that is hardly there.
+
+        1 while the rarer of two ions makes up a millionth of them, then as the inverse square root
+        of its share, up to 1000.
+        """
+        log_share = -np.abs(state)
+        return np.exp(np.clip(-0.5 * (log_share - _RARE), 0.0, _SLACK))
 
     def first_local(self, around: Around, state: FloatArray) -> Local:
         """Kept levels of He I at (a, b)."""

@@ -327,15 +327,21 @@ def integrate_slow(
 
     equations.remember(start, state)
 
-    local = np.full(len(state), _LOCAL)
-    local[2:] = _LOCAL_HELIUM
+    asked = relative or setup.accuracy.relative
+
+    def local_error(reached: FloatArray) -> FloatArray:
+        local = np.full(len(reached), _LOCAL)
+        if equations.helium is not None:
+            local[2:] = _LOCAL_HELIUM * equations.helium.slack(reached[2:])
+        return asked * local
+
     return integrate(
         equations.rate,
         equations.jacobian,
         start,
         state,
         outputs,
-        local * (relative or setup.accuracy.relative),
+        local_error,
         first_step=1e-3,
         max_steps=setup.accuracy.max_steps,
         on_step=on_step,

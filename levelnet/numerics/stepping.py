@@ -121,12 +121,12 @@ def integrate(  # noqa: PLR0913 (each is a choice of the caller)
     start: float,
     state: FloatArray,
     outputs: Sequence[float],
-    tolerance: float | FloatArray,
+    tolerance: float | FloatArray | Callable[[FloatArray], FloatArray],
     *,
     first_step: float,
     max_steps: int,
     on_step: Callable[[float, FloatArray], None] | None = None,
-    longest_step: float = math.inf,
+    longest_step: Callable[[float], float] = lambda _: math.inf,
 ) -> Trajectory:
     """Integrate to every output in turn, the local error of each variable below `tolerance`.
 
@@ -140,16 +140,17 @@ def integrate(  # noqa: PLR0913 (each is a choice of the caller)
         Initial variables; scaled so that an absolute tolerance serves them.
     outputs : sequence of float
         Ascending times, all above `start`; steps end on each exactly.
-    tolerance : float or ndarray, shape (n,)
-        Largest absolute local error of any variable, or of each, in one step.
+    tolerance : float, ndarray of shape (n,), or callable
+        Largest absolute local error of any variable, or of each, in one step; a callable gives it
+        from the state where the step starts.
     first_step : float
         Length of the first step tried.
     max_steps : int
         Limit on accepted plus rejected steps.
     on_step : callable, optional
         Told the time and the state after every accepted step.
-    longest_step : float
-        No step is longer.
+    longest_step : callable
+        No step that starts at this time is longer.
 
     Returns
     -------
@@ -167,11 +168,12 @@ def integrate(  # noqa: PLR0913 (each is a choice of the caller)
                 break
             # Stretch or split evenly rather than leave a sliver before the output.
             pieces = max(1, int(np.ceil((target - now) / step - 0.1)))
-            pieces = max(pieces, math.ceil((target - now) / longest_step))
+            pieces = max(pieces, math.ceil((target - now) / longest_step(now)))
             trial = (target - now) / pieces
             end = target if pieces == 1 else now + trial
             try:
-                new, new_slope, size = _attempt(rate, jacobian, (now, end), y, slope, tolerance)
+                allowed = tolerance(y) if callable(tolerance) else tolerance
+                new, new_slope, size = _attempt(rate, jacobian, (now, end), y, slope, allowed)
             except SolveError as failure:
                 outcome = failure.outcome
                 break

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Callable
 
 import numpy as np
@@ -332,6 +333,28 @@ def test_a_jump_costs_steps_but_no_digits() -> None:
     assert run.outcome.ok
     assert run.state[-1, 0] == pytest.approx(4.0, abs=1e-6)
     assert run.rejected > 0
+
+
+def test_steps_keep_to_a_bound_that_moves_and_to_a_tolerance_that_goes_with_the_state() -> None:
+    def decay(tolerance: float | Callable[[np.ndarray], np.ndarray]) -> Trajectory:
+        return integrate(
+            lambda t, y: -y,
+            lambda t, y: (-np.eye(1), np.zeros(1)),
+            0.0,
+            np.ones(1),
+            (1.0, 8.0),
+            tolerance,
+            first_step=1e-3,
+            max_steps=1000,
+            longest_step=lambda t: 0.02 if t < 1.0 else math.inf,
+        )
+
+    held, eased = decay(1e-9), decay(lambda y: 1e-9 / np.maximum(y, 1e-3))
+    steps = np.diff(held.time)
+    assert steps[held.time[:-1] < 1.0].max() <= 0.02 * (1.0 + ROUND_OFF)
+    assert steps[held.time[:-1] >= 1.0].max() > 0.04
+    assert len(eased.time) < len(held.time)
+    np.testing.assert_allclose(eased.state[-1], math.exp(-8.0), atol=1e-6)
 
 
 def test_nothing_to_do_takes_the_longest_steps() -> None:

@@ -10,6 +10,7 @@ import pytest
 from levelnet.escape.helium_continuum import HeliumContinuum
 from levelnet.escape.helium_treatment import HeliumSobolev, HeliumSobolevFeedback, HeliumTreatment
 from levelnet.history.equations import SlowEquations
+from levelnet.history.helium import HeliumEquations
 from tests.helium_runs import helium_equations, saha_state
 
 REMEMBERED_FROM, NOW = 2100.0, 1950.0
@@ -84,6 +85,21 @@ def test_figures_of_the_lines_hold_both_sides_of_the_field() -> None:
     assert figures["log_red_side"][3] > 1.0  # He I lags, 584 A is brighter than the blackbody
     # Hydrogen takes most of it on the way to 591 A.
     assert 0.0 < figures["log_blue_side"][2] < figures["log_red_side"][3]
+
+
+def test_a_rare_ion_may_be_less_exact_within_bounds() -> None:
+    half, millionth, rarer, gone = 0.0, math.log(1e6), math.log(1e10), 400.0
+    slack = [HeliumEquations.slack(np.array([a, -a])) for a in (half, millionth, rarer, gone)]
+    np.testing.assert_allclose(slack, np.outer([1.0, 1.0, 100.0, 1000.0], [1.0, 1.0]), rtol=1e-12)
+
+
+def test_steps_are_short_only_where_one_line_lights_another() -> None:
+    fed = helium_equations(HeliumSobolevFeedback(), True)
+    assert fed.helium is not None and fed.helium.past is not None
+    assert fed.longest_step(-math.log1p(2000.0)) == fed.helium.past.longest_step
+    # Helium is held below T_r = 1400 K, z = 513.
+    assert fed.longest_step(-math.log1p(500.0)) == math.inf
+    assert helium_equations(HeliumSobolev(), False).longest_step(-7.0) == math.inf
 
 
 def test_nothing_is_remembered_once_helium_is_held() -> None:
