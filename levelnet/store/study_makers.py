@@ -28,6 +28,8 @@ def weighing_of(content: Content) -> Weighing:
     levels = LevelSet(**parts.pop("levels"))
     check_positions(parts, ("upper", "lower", "line_upper"), len(levels))
     budget = parts.pop("budget", None)
+    if budget is not None and not set(parts["targets"]) <= set(budget["targets"]):
+        raise FileFormatError("budget: lacks a target that was weighed")
     return Weighing(
         setup=setup_of(content),
         outcome=outcome_of(content),
