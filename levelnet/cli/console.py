@@ -27,6 +27,13 @@ class Terminated(KeyboardInterrupt):
     """SIGTERM came: like Ctrl-C, with an exit code of its own."""
 
 
+def end_workers() -> None:
+    """Kill the worker processes, which would otherwise be waited for until their tasks are done."""
+    if processes := sys.modules.get("multiprocessing"):
+        for one in processes.active_children():
+            one.kill()
+
+
 class Console:
     """Where a command speaks to the person; results go to stdout and not through here.
 
