@@ -13,6 +13,7 @@ import io
 import logging
 import numbers
 import os
+import sys
 import tempfile
 import time
 import zipfile
@@ -24,6 +25,7 @@ import numpy as np
 from numpy.lib import format as npy
 
 from .arrays import FloatArray
+from .errors import InputError
 
 _LOG = logging.getLogger(__name__)
 _HEADER = b"levelnet piece 1\n"
@@ -146,6 +148,44 @@ class FolderPieces:
             with contextlib.suppress(OSError):
                 os.unlink(path)
                 total -= size
+
+
+class ResultFolder(FolderPieces):
+    """Pieces that are results and no cache: none is ever removed, and none is lost in silence.
+
+    Parameters
+    ----------
+    folder : Path or str
+        Made on the first :meth:`put`.
+    """
+
+    def __init__(self, folder: Path | str) -> None:
+        super().__init__(folder, sys.maxsize)
+        with contextlib.suppress(OSError):  # no such folder yet, or removed by another process
+            for left_over in self.folder.glob("*" + _TEMPORARY_SUFFIX):
+                if time.time() - left_over.stat().st_mtime > _DAY_S:
+                    left_over.unlink()
+
+    def put(self, key: str, arrays: Mapping[str, FloatArray]) -> None:
+        """Keep `arrays` under `key`; InputError, with its cause, where that cannot be done."""
+        try:
+            self.folder.mkdir(parents=True, exist_ok=True)
+            self._write(self._path(key), _pack(key, arrays))
+        except OSError as error:
+            reason = error.strerror or str(error)
+            raise InputError(f"{self.folder}: cannot be written: {reason}") from error
+
+
+def text_array(text: str) -> FloatArray:
+    """Text as an array that a piece can hold: the bytes of its UTF-8."""
+    return np.frombuffer(text.encode(), np.uint8).astype(np.float64)
+
+
+def array_text(array: FloatArray) -> str:
+    """Undo :func:`text_array`; ValueError for what it never gave."""
+    if array.ndim != 1 or not np.all((array >= 0.0) & (array < 256.0)):
+        raise ValueError("no text")
+    return array.astype(np.uint8).tobytes().decode()
 
 
 def default_cache_folder() -> Path:

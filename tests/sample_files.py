@@ -16,12 +16,14 @@ from levelnet.store import (
     ESCAPE_LAYOUT,
     LAYOUT_NAME,
     LEVEL_LAYOUT,
+    SWEEP_LAYOUT,
     TABLE_LAYOUT,
     WEIGHING_LAYOUT,
     write_distilled,
 )
 from tests.invented_escape import cheap_study
 from tests.invented_history import history_with_field
+from tests.invented_sweep import invented
 from tests.invented_weighing import invented_budget, invented_weighing
 from tests.small_helium import helium_history
 from tests.small_levels import small_study
@@ -48,6 +50,8 @@ RESULTS: dict[str, Callable[[Path], None]] = {
     WEIGHING_LAYOUT.name: _weighing,
     LEVEL_LAYOUT.name: lambda path: levelnet.write(small_study(), path),
     ESCAPE_LAYOUT.name: lambda path: levelnet.write(cheap_study(), path),
+    SWEEP_LAYOUT.name: lambda path: levelnet.write(invented(), path),
+    f"{SWEEP_LAYOUT.name}, each its own outputs": lambda path: levelnet.write(invented(True), path),
 }
 """Writers of result files, by what is in them; all layouts together."""
 

@@ -34,6 +34,17 @@ def _shown(letter: str) -> str:
     return letter if fine else letter.encode("unicode_escape").decode("ascii")
 
 
+class Terminated(KeyboardInterrupt):
+    """SIGTERM came: like Ctrl-C, with an exit code of its own."""
+
+
+def end_workers() -> None:
+    """Kill the worker processes, which would otherwise be waited for until their tasks are done."""
+    if processes := sys.modules.get("multiprocessing"):
+        for one in processes.active_children():
+            one.kill()
+
+
 class Console:
     """Where a command speaks to the person; results go to stdout and not through here.
 
@@ -45,7 +56,7 @@ class Console:
 
     def __init__(self, quiet: bool = False) -> None:
         self.quiet = quiet
-        self.interrupted = False
+        self.ending: type[KeyboardInterrupt] | None = None
 
     def notice(self, text: str) -> None:
         """Say something that is neither result nor complaint."""
@@ -119,8 +130,8 @@ class ProgressBar:
 
     def __call__(self, stage: str, fraction: float) -> None:
         """Note that `stage` is done to `fraction`, 0 to 1."""
-        if self._console.interrupted:
-            raise KeyboardInterrupt
+        if self._console.ending is not None:
+            raise self._console.ending
         with self._lock:
             self._state = (stage, fraction)
             if self._bar is not None:

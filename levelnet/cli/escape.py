@@ -13,6 +13,7 @@ from .distill import worker_count, worker_processes
 from .escape_output import escape_summary, escape_values
 from .output import print_result
 from .paths import check_folder, check_target
+from .plan import print_plan
 from .solve import cache_pieces
 from .study import WITHIN, add_files, add_question, add_running, asked_range, asked_requirement
 
@@ -56,10 +57,16 @@ def run(options: argparse.Namespace, console: Console) -> int:
     requirement = asked_requirement(options.requirement, setup)
     order = None if options.order is None else _names(options.order)
     target = options.output or Path(f"{options.setup.stem}-escape.h5")
-    check_target(target, options.force, options.setup)
+    check_target(target, options.force or options.plan, options.setup)
     asked = () if requirement is None else tuple(requirement.to_toml().splitlines())
     question = Question(options.within, *asked_range(setup, options), asked)
     _check_place(options)
+    if options.plan:
+        from ..studies.plans import plan_escape
+
+        ends = question.low, question.high
+        plan = plan_escape(setup, order, ends, worker_count(options.workers))
+        return print_plan(plan, options.json)
     start = time.monotonic()
     study = _study(setup, order, requirement, question, options, console)
     seconds = time.monotonic() - start

@@ -14,6 +14,7 @@ from .distill import worker_count, worker_processes
 from .level_output import level_summary, level_values
 from .output import print_result, size_text, time_text
 from .paths import check_folder, check_target
+from .plan import print_plan
 from .solve import cache_pieces
 from .study import WITHIN, add_files, add_question, add_running, asked_range, asked_requirement
 
@@ -64,10 +65,16 @@ def run(options: argparse.Namespace, console: Console) -> int:
     rungs = None if options.rungs is None else whole_numbers("--rungs", options.rungs)
     resolve = () if options.resolve is None else whole_numbers("--resolve", options.resolve)
     target = options.output or Path(f"{options.setup.stem}-levels.h5")
-    check_target(target, options.force, options.setup)
+    check_target(target, options.force or options.plan, options.setup)
     asked = () if requirement is None else tuple(requirement.to_toml().splitlines())
     question = Question(options.within, *asked_range(setup, options), asked)
     ladder = _checked_ladder(setup, rungs, resolve, options)
+    if options.plan:
+        from ..studies.plans import plan_levels
+
+        ends = question.low, question.high
+        plan = plan_levels(setup, ladder, resolve, ends, worker_count(options.workers))
+        return print_plan(plan, options.json)
     start = time.monotonic()
     study = _study(setup, ladder, resolve, requirement, question, options, console)
     seconds = time.monotonic() - start

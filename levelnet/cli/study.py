@@ -6,6 +6,8 @@ import argparse
 from pathlib import Path
 from typing import TYPE_CHECKING
 
+from .plan import add_plan
+
 if TYPE_CHECKING:
     from ..history.setup import Setup
     from ..studies.requirement import Requirement
@@ -53,6 +55,7 @@ def add_question(parser: argparse.ArgumentParser, candidate: str) -> None:
 
 def add_running(parser: argparse.ArgumentParser, runs: str) -> None:
     """Declare how the work is done and where figures go; `runs` is what processes share."""
+    add_plan(parser)
     parser.add_argument("--plot", metavar="FOLDER", type=Path, help="write figures into FOLDER")
     parser.add_argument(
         "--workers",

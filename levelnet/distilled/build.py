@@ -20,8 +20,9 @@ from ..network.scaled import scaled_levels
 from ..network.tabulation import TabulatedReduction, node_count
 from ..numerics.chebyshev import ChebyshevSeries, chebyshev_nodes
 from ..pieces import Pieces
+from .certificate import RADIATION_POINTS
 from .certificate import certify as certify_table
-from .kept import check_lines, check_overrides, choose_kept
+from .kept import KeptChoice, check_lines, check_overrides, choose_kept
 from .nodes import Atom, NodeSource, outline
 from .patches import Patches, Ranges, fit_patches
 from .table import EffectiveTable
@@ -96,15 +97,10 @@ def distill(  # noqa: PLR0913  choices by name, each with a default
     SolveError
         If the tolerance is out of reach, or a worker process dies again and again on one input.
     """
-    setup.require_inert_helium("a distilled table")
-    choice = choose_kept(setup, kept)
+    choice = check_distillable(setup, kept, tolerance)
     ranges = _ranges(radiation_range_k, ratio_range)
-    if not TIGHTEST <= tolerance <= LOOSEST:
-        raise InputError(f"tolerance = {tolerance:g}: allowed are {TIGHTEST:g} to {LOOSEST:g}")
     check_memory(setup, workers)
     tell = progress or (lambda stage, fraction: None)
-    check_overrides(setup)
-    check_lines(setup.lines)
     atom = Atom.of(setup.hydrogen, choice, setup.rates.network)
     tell("atomic data", 0.0)
     with threadpool_limits(limits=1, user_api="blas"):
@@ -121,6 +117,29 @@ def distill(  # noqa: PLR0913  choices by name, each with a default
             table = dataclasses.replace(table, certificate=certificate)
     tell("done", 1.0)
     return table
+
+
+def check_distillable(
+    setup: Setup, kept: Iterable[tuple[int, int]] | None, tolerance: float
+) -> KeptChoice:
+    """The levels that a table keeps; InputError for a setup or tolerance that makes no table."""
+    setup.require_inert_helium("a distilled table")
+    choice = choose_kept(setup, kept)
+    if not TIGHTEST <= tolerance <= LOOSEST:
+        raise InputError(f"tolerance = {tolerance:g}: allowed are {TIGHTEST:g} to {LOOSEST:g}")
+    check_overrides(setup)
+    check_lines(setup.lines)
+    return choice
+
+
+def expected_reductions(
+    tolerance: float,
+    certify: bool = True,
+    radiation_range_k: tuple[float, float] = (25.0, 9000.0),
+) -> int:
+    """How often :func:`distill` is going to reduce the network, if no series needs refining."""
+    series = node_count(*radiation_range_k, _SERIES * tolerance) + len(_CHECKS)
+    return 2 * series + RADIATION_POINTS if certify else series
 
 
 class _Counter:

@@ -5,6 +5,7 @@ from .exports import export_paths, write_export
 from .layout import LAYOUT_NAME, LAYOUT_VERSION, describe_layout
 from .level_layout import LEVEL_LAYOUT, describe_level_layout
 from .read import read, read_attributes, read_table
+from .sweep_layout import SWEEP_LAYOUT, describe_sweep_layout
 from .table_layout import DISTILLED_LAYOUT, TABLE_LAYOUT, describe_table_layout
 from .text import write_csv, write_distilled_csv
 from .weighing_layout import WEIGHING_LAYOUT, describe_weighing_layout
@@ -17,12 +18,14 @@ __all__ = [
     "LAYOUT_NAME",
     "LAYOUT_VERSION",
     "LEVEL_LAYOUT",
+    "SWEEP_LAYOUT",
     "TABLE_LAYOUT",
     "WEIGHING_LAYOUT",
     "check_output",
     "describe_escape_layout",
     "describe_layout",
     "describe_level_layout",
+    "describe_sweep_layout",
     "describe_table_layout",
     "describe_weighing_layout",
     "export_paths",

@@ -65,6 +65,7 @@ def load(stream: BinaryIO, layouts: Iterable[Layout]) -> Iterator[Piece]:
         chosen = _layout_of(file, layouts)
         attributes = _attributes(file, chosen.attributes, "")
         yield Piece({"attributes": attributes})
+        chosen = _own_layout(chosen, attributes)
         known = {one.name: one for one in (*chosen.required, *chosen.optional)}
         required = [one.name for one in chosen.required]
         for name in _members(file, "", known, required):
@@ -86,6 +87,16 @@ def _layout_of(file: h5py.File, layouts: Iterable[Layout]) -> Layout:
             "reads; update levelnet"
         )
     return chosen
+
+
+def _own_layout(chosen: Layout, attributes: dict[str, Any]) -> Layout:
+    """The layout of this very file, where it depends on attributes."""
+    if chosen.by_attributes is None:
+        return chosen
+    try:
+        return chosen.by_attributes(attributes)
+    except ValueError as error:
+        raise Damage(str(error)) from None
 
 
 def _load_group(file: h5py.File, group: Group) -> Iterator[Piece]:

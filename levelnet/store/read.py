@@ -30,6 +30,7 @@ from .level_layout import LEVEL_LAYOUT
 from .parts import all_fields, check_positions, fields_of, outcome_of, setup_of
 from .schema import Content, Layout
 from .study_makers import escape_study_of, level_study_of, weighing_of
+from .sweep_layout import SWEEP_LAYOUT, sweep_of
 from .table_layout import DISTILLED_LAYOUT, TABLE_LAYOUT
 from .weighing_layout import WEIGHING_LAYOUT
 
@@ -38,15 +39,16 @@ if TYPE_CHECKING:
     from ..distilled.table import EffectiveTable
     from ..studies.escape_records import EscapeStudy
     from ..studies.level_records import LevelStudy
+    from ..studies.sweep_record import Sweep
     from ..studies.weighing import Weighing
 
-    Record = History | EffectiveTable | FastHistory | Weighing | LevelStudy | EscapeStudy
+    Record = History | EffectiveTable | FastHistory | Weighing | LevelStudy | EscapeStudy | Sweep
 
 _HDF5_SIGNATURE = b"\x89HDF\r\n\x1a\n"
 
 
 def read(path: str | Path) -> Record:
-    """Read a history, a table of effective rates, a history made from one, or a study.
+    """Read a history, a table of effective rates, a history made from one, a study, or a sweep.
 
     Parameters
     ----------
@@ -55,7 +57,7 @@ def read(path: str | Path) -> Record:
 
     Returns
     -------
-    History, EffectiveTable, FastHistory, Weighing, LevelStudy or EscapeStudy
+    History, EffectiveTable, FastHistory, Weighing, LevelStudy, EscapeStudy or Sweep
         Equal to what was written, to the bit.
 
     Raises
@@ -208,4 +210,5 @@ _MAKERS: dict[str, tuple[Layout, Callable[[Content], Record]]] = {
     WEIGHING_LAYOUT.name: (WEIGHING_LAYOUT, weighing_of),
     LEVEL_LAYOUT.name: (LEVEL_LAYOUT, level_study_of),
     ESCAPE_LAYOUT.name: (ESCAPE_LAYOUT, escape_study_of),
+    SWEEP_LAYOUT.name: (SWEEP_LAYOUT, sweep_of),
 }

@@ -38,6 +38,7 @@ from .frozen import FrozenHistory, freeze
 from .scalars import Scalars, scalars_of
 from .sensitivity import StageRates, line_parameters, node_results, stage_rates, stages
 from .targets import Target, parse_target
+from .weigh_pieces import KeptWeights
 from .weighing import Weighing
 
 
@@ -117,7 +118,7 @@ def weigh(
         for target, value in zip(parsed, scalars.value.tolist(), strict=True):
             if not np.isfinite(value):
                 raise InputError(f"target {target.name}: the history does not reach it")
-        return _assemble(setup, history, parsed, scalars, tell)
+        return _assemble(setup, history, parsed, scalars, tell, pieces)
 
 
 def reach(
@@ -176,13 +177,14 @@ def _assemble(
     targets: Sequence[Target],
     scalars: Scalars,
     tell: Progress,
+    pieces: Pieces | None,
 ) -> Weighing:
     ladder = history.integrated.ladder
     weight, _ = adjoint(history.solution, scalars.by_state)
     flat = weight.reshape(len(targets), -1, 2)
     rates = stage_rates(history)
     direct = _direct(history, scalars, flat, rates)
-    by_rate = _by_rates(history, scalars, flat[:, :, 0], rates.scale, tell)
+    by_rate = _by_rates(history, scalars, flat[:, :, 0], rates.scale, tell, pieces)
     found = transitions(ladder)
     value = scalars.value
     names, places, by_log = _parameters(history)
@@ -235,6 +237,7 @@ def _by_rates(
     weight: FloatArray,
     scale: FloatArray,
     tell: Progress,
+    pieces: Pieces | None,
 ) -> NodeWeights:
     """DJ by the ln of every line strength and cross section; `scale` is that of the stages."""
     here = stages(history)
@@ -251,9 +254,11 @@ def _by_rates(
     )
     pairs, work = exchange_pairs(ladder), Workspace.of(ladder)
     temperatures = sources[0].temperature_k.tolist()
+    kept = KeptWeights(pieces, history.setup, sources[0].temperature_k, by_result, total)
     for count, temperature_k in enumerate(temperatures):
-        if np.any(by_result[count]):
+        if count >= kept.done and np.any(by_result[count]):
             add_node_weights(ladder, pairs, temperature_k, by_result[count], total, work)
+            kept.note(count + 1)
         tell("weighing rates", (count + 1) / len(temperatures))
     for line in scalars.lines:
         if line.ends is not None:
