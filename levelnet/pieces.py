@@ -302,11 +302,28 @@ def _unpack(key: str, data: bytes) -> dict[str, FloatArray] | None:
     content = data[start:]
     if data[:start] != _HEADER + _checksum(key, content):
         return None
+    try:
+        return _arrays(content)
+    except Exception as error:  # zipfile and numpy raise nearly anything over nonsense
+        _LOG.debug("a piece with a right checksum, and not as levelnet packs it: %s", error)
+        return None
+
+
+def _arrays(content: bytes) -> dict[str, FloatArray]:
+    """Take arrays out of an archive; ValueError for what :func:`_pack` never makes."""
     arrays: dict[str, FloatArray] = {}
     with zipfile.ZipFile(io.BytesIO(content)) as archive:
-        for member in archive.namelist():
-            with archive.open(member) as file:
-                arrays[member.removesuffix(".npy")] = npy.read_array(file, allow_pickle=False)
+        members = archive.infolist()
+        # Neither compressed nor overlapping: nothing grows beyond the size of the file.
+        plain = all(one.compress_type == zipfile.ZIP_STORED for one in members)
+        if not plain or sum(one.file_size for one in members) > len(content):
+            raise ValueError("compressed, or larger inside than outside")
+        for one in members:
+            with archive.open(one) as file:
+                array = npy.read_array(file, allow_pickle=False)
+            if array.dtype != np.float64:
+                raise ValueError(f"{one.filename} holds {array.dtype}")
+            arrays[one.filename.removesuffix(".npy")] = array
     return arrays
 
 

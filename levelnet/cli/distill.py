@@ -12,7 +12,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 from ..errors import InputError
-from .console import Console
+from .console import Console, end_workers
 from .output import print_result
 from .paths import check_target
 from .plan import add_plan, print_plan
@@ -187,6 +187,9 @@ def worker_processes(count: int) -> Iterator[Executor | None]:
     executor = process_pool(count)
     try:
         yield executor
+    except KeyboardInterrupt:
+        end_workers()  # those that were being started when the signal came
+        raise
     finally:
         executor.shutdown(wait=True, cancel_futures=True)
 

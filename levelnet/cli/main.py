@@ -28,7 +28,7 @@ from . import (
     tables,
     weigh,
 )
-from .console import Console, Terminated, one_line
+from .console import Console, Terminated, end_workers, one_line
 
 # Input was good, but the disk was not: a failure and no bad input.
 _DISK_TROUBLE = {errno.ENOSPC, errno.EDQUOT, errno.EIO, errno.EFBIG, errno.EROFS}
@@ -184,7 +184,7 @@ def _remembered_signals(console: Console) -> Iterator[None]:
 
     def remember(number: int, frame: FrameType | None) -> None:
         console.ending = Terminated if number == signal.SIGTERM else KeyboardInterrupt
-        _end_workers()
+        end_workers()
         raise console.ending
 
     # Only where a signal would end the program (a job started to ignore it goes on ignoring it),
@@ -203,10 +203,3 @@ def _remembered_signals(console: Console) -> Iterator[None]:
     finally:
         for number in found:
             signal.signal(number, usual[number])
-
-
-def _end_workers() -> None:
-    """Kill the worker processes, which would otherwise be waited for until their tasks are done."""
-    if processes := sys.modules.get("multiprocessing"):
-        for one in processes.active_children():
-            one.kill()

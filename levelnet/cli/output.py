@@ -11,6 +11,7 @@ from typing import TYPE_CHECKING, Any, Literal
 
 from ..constants import SECONDS_PER_YEAR
 from ..quantities import OBSERVABLES
+from .console import harmless
 from .helium_output import helium_fraction_columns, helium_line_rows, helium_text, helium_values
 from .line_output import line_rows, line_values
 
@@ -52,13 +53,13 @@ def print_result(
         more = {"file": file, "written": written, "seconds": seconds}
         print_json(values() | {name: one for name, one in more.items() if one is not None})
         return
-    print(text())
+    print(harmless(text()))  # titles and names come from files
     rows = [] if file is None else [("file", str(file))]
     rows += [("written", str(path)) for path in written or ()]
     if seconds is not None:
         rows.append(("time", time or time_text(seconds)))
     for label, said in rows:
-        print(row(label, said))
+        print(harmless(row(label, said)))
 
 
 def print_json(values: object) -> None:

@@ -307,8 +307,11 @@ def _plain(values: Mapping[str, Any]) -> dict[str, Any]:
     return {k: list(v) if isinstance(v, tuple) else v for k, v in scalars.items()} | tables
 
 
-def parse_setup(text: str, where: str = "setup") -> Setup:
-    """Read a setup from TOML text; every complaint is listed at once with its path."""
+def parse_setup(text: str, where: str = "setup", with_files: bool = True) -> Setup:
+    """Read a setup from TOML text; every complaint is listed at once with its path.
+
+    Where `with_files` is False the text must hold everything itself: no other file is opened.
+    """
     try:
         values = tomllib.loads(text)
     except (
@@ -317,9 +320,18 @@ def parse_setup(text: str, where: str = "setup") -> Setup:
     ) as error:  # TOMLDecodeError is a ValueError; so are huge numbers
         raise InputError(f"{where}: not valid TOML: {error}") from None
     try:
+        if not with_files:
+            _refuse_files(values)
         return build(Setup, values)
     except InputError as error:
         raise InputError(f"{where}: {error}") from None
+
+
+def _refuse_files(values: Mapping[str, Any]) -> None:
+    for table, key in (("cosmology", "expansion_table"), ("rates", "overrides")):
+        part = values.get(table)
+        if isinstance(part, Mapping) and part.get(key) is not None:
+            raise InputError(f"{table}.{key}: names a file; allowed here are its rows alone")
 
 
 def load_setup(path: str | Path) -> Setup:
