@@ -12,6 +12,7 @@ from ...history.samples import sample_rows
 from ..figures import make_figures
 from .content import Block, Chapter, Facts, Origin, Picture, Section, Table
 from .drawing import picture
+from .helium_parts import half_neutral, helium_line_tables, helium_said
 from .wording import (
     asked_section,
     largest_distortion,
@@ -84,8 +85,10 @@ def _answer(history: History) -> str:
 def _found(history: History) -> tuple[Block, ...]:
     marks = history.milestones
     years = SECONDS_PER_YEAR
+    helium = (("helium is half neutral", number(half_neutral(history), ".1f")),)
     events = Facts(
         (
+            *(helium if history.helium is not None else ()),
             ("last scattering, tau = 1", number(marks.last_scattering_redshift, ".3f")),
             ("its time", number(marks.last_scattering_time_s / years, ",.0f", "years")),
             ("peak of the visibility", number(marks.visibility_peak_redshift, ".3f")),
@@ -105,14 +108,16 @@ def _samples(history: History) -> Table:
         ("T_r (K)", history.radiation_temperature_k, ".6g"),
         ("tau", history.optical_depth, ".4g"),
     ]
+    shown = set(sample_rows(history.redshift))
     if history.helium is not None:
         columns[2:2] = [
             ("He II/He", history.singly_ionized_helium_fraction, ".4e"),
             ("He III/He", history.doubly_ionized_helium_fraction, ".4e"),
         ]
+        shown |= set(sample_rows(history.redshift, "helium"))
     rows = tuple(
         (f"{history.redshift[k]:.2f}", *(f"{values[k]:{form}}" for _, values, form in columns))
-        for k in sample_rows(history.redshift)
+        for k in sorted(shown)
     )
     return Table("The history at some redshifts", ("z", *(head for head, _, _ in columns)), rows)
 
@@ -176,6 +181,7 @@ def _said(history: History) -> dict[str, tuple[str, str]]:
             f"maximum of {number(marks.visibility_width, '.1f')}.",
         ),
         "spectrum": ("Spectrum of the radiation field", spectra),
+        **({} if history.helium is None else helium_said(history)),
     }
 
 
@@ -222,7 +228,7 @@ def _trust(history: History) -> tuple[Block, ...]:
             ("helium: conservation", f"{helium.conservation_error:.1e}"),
             ("charge and nuclei", f"closed to {helium.closure_error:.1e}"),
         ]
-    return (Facts(tuple(rows)), *_line_tables(history))
+    return (Facts(tuple(rows)), *_line_tables(history), *helium_line_tables(history))
 
 
 def _line_tables(history: History) -> tuple[Table, ...]:
