@@ -15,8 +15,6 @@ _FRACTIONS = (
     "singly_ionized_helium_fraction",
     "doubly_ionized_helium_fraction",
 )
-# Redshifts at which the lines of He I are worth a row.
-_SAMPLES = (3000.0, 2600.0, 2300.0, 2000.0, 1900.0, 1800.0, 1700.0, 1600.0)
 _COLUMNS = {
     "share": ("share", "{:.2e}"),
     "optical_depth": ("depth", "{:.2e}"),
@@ -43,10 +41,12 @@ def helium_values(history: History, rows: list[int] | IntArray) -> dict[str, Any
     """Fractions at some outputs and how it went, under the names of the fields; None: inert."""
     if history.helium is None:
         return None
+    from ..history.samples import helium_rows
+
     found: dict[str, Any] = {"n_max": history.setup.helium.n_max}
     found |= {name: getattr(history, name)[rows] for name in _FRACTIONS}
     found |= {name: getattr(history.helium, name) for name in _HOW}
-    lines, rows = history.helium.lines, helium_rows(history)
+    lines, rows = history.helium.lines, helium_rows(history.redshift)
     figures = [one.name for one in dataclasses.fields(lines) if one.name != "names"]
     figures_of_lines = {
         name: {figure: getattr(lines, figure)[rows, k] for figure in figures}
@@ -63,19 +63,14 @@ def helium_fraction_columns(history: History) -> dict[str, FloatArray]:
     return {name: getattr(history, one) for name, one in zip(names, _FRACTIONS, strict=True)}
 
 
-def helium_rows(history: History) -> list[int]:
-    """Outputs nearest to a few redshifts at which He I recombines; each once, ascending."""
-    z = history.redshift
-    wanted = [one for one in _SAMPLES if z[-1] <= one <= z[0]]
-    return sorted({int(abs(z - one).argmin()) for one in wanted})
-
-
 def helium_line_rows(history: History) -> list[tuple[str, ...]]:
     """Table of figures of the two lines with the largest shares; first rows name the columns.
 
     Nothing where helium is inert or no output lies where He I recombines.
     """
-    rows = helium_rows(history)
+    from ..history.samples import helium_rows
+
+    rows = helium_rows(history.redshift)
     if history.helium is None or not rows:
         return []
     lines = history.helium.lines

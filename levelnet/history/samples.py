@@ -23,6 +23,21 @@ _SAMPLES["both"] = (
     *_SAMPLES["hydrogen"],
 )
 
+# Where the lines of He I are worth a row.
+_HELIUM_LINES = (3000.0, 2600.0, 2300.0, 2000.0, 1900.0, 1800.0, 1700.0, 1600.0)
+
+
+def helium_rows(redshift: FloatArray) -> list[int]:
+    """Outputs nearest to a few redshifts at which He I recombines; each once, ascending.
+
+    Parameters
+    ----------
+    redshift : ndarray, shape (n_redshift,), dimensionless
+        Descending.
+    """
+    wanted = [z for z in _HELIUM_LINES if redshift[-1] <= z <= redshift[0]]
+    return sorted({int(np.argmin(np.abs(redshift - z))) for z in wanted})
+
 
 def sample_rows(
     redshift: FloatArray, atom: Literal["hydrogen", "helium", "both"] = "hydrogen"

@@ -6,8 +6,9 @@ import importlib.util
 import sys
 from pathlib import Path
 
-import numba
 import pytest
+
+from levelnet.kernels import compile as compile_module
 
 KERNEL = """
 from levelnet.kernels.compile import kernel
@@ -31,7 +32,7 @@ def call(folder: Path) -> tuple[float, int]:
 @pytest.fixture
 def folder(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Path:
     (tmp_path / "mine.py").write_text(KERNEL)
-    monkeypatch.setattr(numba.config, "CACHE_DIR", str(tmp_path / "cache"))
+    monkeypatch.setattr(compile_module, "_FOLDER", str(tmp_path / "cache"))
     monkeypatch.setitem(sys.modules, "mine", None)
     assert call(tmp_path) == (42.0, 0)
     assert call(tmp_path) == (42.0, 1)

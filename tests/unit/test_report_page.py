@@ -14,6 +14,7 @@ from collections import Counter
 from functools import lru_cache
 from importlib.resources import files
 from pathlib import Path
+from typing import Any
 
 import html5lib
 import numpy as np
@@ -30,9 +31,11 @@ from levelnet.report.page.works import Work, works_of
 from levelnet.store.sweep_layout import sealed_content
 from levelnet.store.write import content_of
 from levelnet.studies.sweep_record import Sweep
-from tests.invented_escape import cheap_study
+from tests.helium_tables import helium_table
+from tests.invented_escape import both, cheap_study
 from tests.invented_history import history_with_field, invented_history
-from tests.invented_weighing import band_targets, invented_budget, invented_weighing
+from tests.invented_weighing import band_targets, invented_budget, invented_weighing, with_helium
+from tests.small_helium import helium_history
 from tests.small_levels import small_study
 from tests.small_runs import small_setup
 from tests.small_tables import small_table
@@ -54,6 +57,10 @@ KINDS = (
     "budget",
     "sweep",
     "sweep apart",
+    "helium",
+    "helium escape",
+    "helium table",
+    "helium weighing",
 )
 
 
@@ -84,11 +91,25 @@ def invented_certificate() -> Certificate:
 
 
 @lru_cache(maxsize=len(KINDS))
+def helium_record(kind: str) -> Any:
+    """Results with levels of helium in them."""
+    if kind == "helium escape":
+        return both()
+    if kind == "helium table":
+        return helium_table()
+    if kind == "helium weighing":
+        return with_helium(invented_weighing())
+    return helium_history(1e-4)
+
+
 def record_of(kind: str) -> tuple[object, Setup]:
     """A result of each kind, and its setup; all are invented or small."""
     record: object
     if kind.startswith("sweep"):
         return invented_sweep(apart=kind == "sweep apart", reason=("", "", BAD)), small_setup(4)
+    if kind.startswith("helium"):
+        record = helium_record(kind)
+        return record, record.setup
     if kind in {"levels", "escape"}:
         study = small_study() if kind == "levels" else cheap_study()
         return study, study.setup
@@ -382,3 +403,20 @@ def test_bibtex_entries_are_whole_and_named_apart() -> None:
         "  year = {2008},",
         "}",
     ]
+
+
+def test_helium_has_its_tables_figures_and_answers() -> None:
+    run = page_of("helium")
+    assert "helium is half neutral" in run and "He II/He" in run
+    assert "Validity figures of 2 1P-1 1S of He I" in run
+    for title in ("Ionization of helium", "Departure coefficients of He I"):
+        assert f">{title}<" in run
+    # Sampled where helium recombines too.
+    assert re.search(r'scope="row"[^>]*>2[0-9]{3}\.', run)
+    weighed = page_of("helium weighing")
+    assert "By rates of helium" in weighed and "escape of 2 1P-1 1S" in weighed
+    assert "The largest of He I for z_*" in weighed
+    studied = page_of("helium escape")
+    assert "Lines of He I: What came out" in studied and "Lines of He I: Figures" in studied
+    assert page_of("escape").count("<figure") < studied.count("<figure")
+    assert "helium: lines to the ground state" in page_of("helium table")

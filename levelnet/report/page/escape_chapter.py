@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import dataclasses
 import math
 
 import numpy as np
@@ -37,6 +38,12 @@ from .wording import (
     trust_section,
 )
 
+_WHAT = {
+    ("H I", False): "Treatments of the Lyman lines against the field resolved in frequency",
+    ("H I", True): "Treatments of the Lyman lines against the field resolved in frequency, and of "
+    "the lines of He I against the best of them",
+    ("He I", False): "Treatments of the lines of He I against the best of them",
+}
 _WAYS = ("added first", "added last", "added in order")
 
 
@@ -52,29 +59,47 @@ def escape_chapter(study: EscapeStudy, origin: Origin, prefix: str) -> Chapter:
     prefix : str
         Of every name in the chapter.
     """
-    found, met = escape_answer(study)
+    found, _ = escape_answer(study)
+    inner = study.helium
+    within = () if inner is None else _sections(inner, f"{prefix}-helium", "Lines of He I: ")
     asked = (
         ("variants", str(len(study.variants.name))),
         ("reference", study.variants.name[study.reference]),
         ("error of x_e allowed", f"{found.within:g} at {found.low:g} <= z <= {found.high:g}"),
     )
-    # How far each treatment is off stands in the tables; first comes what is enough.
-    said = [verdict_texts(study, found)[-1], *(() if met is None else (demands_text(met),))]
+    more = () if inner is None else _answers(inner)
     return Chapter(
         name=prefix,
         title=one_line(study.setup.title),
-        what="Treatments of the Lyman lines against the field resolved in frequency",
+        what=_WHAT[study.species, inner is not None],
         file=origin.name,
         ok=study.outcome.ok,
         outcome=study.outcome.value,
-        answers=tuple(f"{text[0].upper()}{text[1:]}." for text in said),
+        answers=(*_answers(study), *(f"Lines of He I: {text}" for text in more)),
         sections=(
             asked_section(prefix, study.setup, asked),
-            Section(f"{prefix}-found", "What came out", _found(study, found, met)),
-            Section(f"{prefix}-figures", "Figures", _pictures(study, found, prefix)),
-            trust_section(prefix, _trust(study, found), study.notes),
+            *_sections(study, prefix),
+            *within,
             origin_section(prefix, origin),
         ),
+    )
+
+
+def _answers(study: EscapeStudy) -> tuple[str, ...]:
+    """What is enough; how far each treatment is off stands in the tables."""
+    found, met = escape_answer(study)
+    said = [verdict_texts(study, found)[-1], *(() if met is None else (demands_text(met),))]
+    return tuple(f"{text[0].upper()}{text[1:]}." for text in said)
+
+
+def _sections(study: EscapeStudy, prefix: str, heading: str = "") -> tuple[Section, ...]:
+    """What came out, the figures, and how far to trust them, of the lines of one atom."""
+    found, met = escape_answer(study)
+    trust = trust_section(prefix, _trust(study, found), study.notes)
+    return (
+        Section(f"{prefix}-found", f"{heading}What came out", _found(study, found, met)),
+        Section(f"{prefix}-figures", f"{heading}Figures", _pictures(study, found, prefix)),
+        dataclasses.replace(trust, title=f"{heading}{trust.title}"),
     )
 
 

@@ -62,17 +62,22 @@ def fast_chapter(history: FastHistory, setup: Setup, origin: Origin, prefix: str
 
 
 def _found(history: FastHistory) -> tuple[Block, ...]:
-    columns = (
-        (history.free_electron_fraction, ".6e"),
-        (history.neutral_hydrogen_fraction, ".6e"),
-        (history.matter_temperature_k, ".6g"),
-        (history.radiation_temperature_k, ".6g"),
-    )
+    columns = [
+        ("x_e = n_e/n_H", history.free_electron_fraction, ".6e"),
+        ("x_HI", history.neutral_hydrogen_fraction, ".6e"),
+        ("T_m (K)", history.matter_temperature_k, ".6g"),
+        ("T_r (K)", history.radiation_temperature_k, ".6g"),
+    ]
+    if history.helium is not None:
+        columns[2:2] = [
+            ("He II/He", history.helium.singly_ionized_helium_fraction, ".4e"),
+            ("He III/He", history.helium.doubly_ionized_helium_fraction, ".4e"),
+        ]
     rows = tuple(
-        (f"{history.redshift[k]:.2f}", *(f"{values[k]:{form}}" for values, form in columns))
+        (f"{history.redshift[k]:.2f}", *(f"{values[k]:{form}}" for _, values, form in columns))
         for k in sample_rows(history.redshift, "hydrogen" if history.helium is None else "both")
     )
-    head = ("z", "x_e = n_e/n_H", "x_HI", "T_m (K)", "T_r (K)")
+    head = ("z", *(name for name, _, _ in columns))
     table = Table("The history at some redshifts", head, rows)
     seen = history.observables
     if seen is None:

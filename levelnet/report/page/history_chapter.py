@@ -12,6 +12,7 @@ from ...history.samples import sample_rows
 from ..figures import make_figures
 from .content import Block, Chapter, Facts, Origin, Picture, Section, Table
 from .drawing import picture
+from .helium_parts import half_neutral, helium_line_tables, helium_said
 from .wording import (
     asked_section,
     largest_distortion,
@@ -84,8 +85,10 @@ def _answer(history: History) -> str:
 def _found(history: History) -> tuple[Block, ...]:
     marks = history.milestones
     years = SECONDS_PER_YEAR
+    helium = (("helium is half neutral", number(half_neutral(history), ".1f")),)
     events = Facts(
         (
+            *(helium if history.helium is not None else ()),
             ("last scattering, tau = 1", number(marks.last_scattering_redshift, ".3f")),
             ("its time", number(marks.last_scattering_time_s / years, ",.0f", "years")),
             ("peak of the visibility", number(marks.visibility_peak_redshift, ".3f")),
@@ -176,6 +179,7 @@ def _said(history: History) -> dict[str, tuple[str, str]]:
             f"maximum of {number(marks.visibility_width, '.1f')}.",
         ),
         "spectrum": ("Spectrum of the radiation field", spectra),
+        **({} if history.helium is None else helium_said(history)),
     }
 
 
@@ -222,7 +226,7 @@ def _trust(history: History) -> tuple[Block, ...]:
             ("helium: conservation", f"{helium.conservation_error:.1e}"),
             ("charge and nuclei", f"closed to {helium.closure_error:.1e}"),
         ]
-    return (Facts(tuple(rows)), *_line_tables(history))
+    return (Facts(tuple(rows)), *_line_tables(history), *helium_line_tables(history))
 
 
 def _line_tables(history: History) -> tuple[Table, ...]:

@@ -27,6 +27,11 @@ from .wording import (
     unit_text,
 )
 
+_WHAT = {
+    "hydrogen": "How many levels matter: a ladder of n_max",
+    "helium": "How many levels of helium matter: a ladder of its n_max",
+}
+
 
 def levels_chapter(study: LevelStudy, origin: Origin, prefix: str) -> Chapter:
     """Everything a page says of a study of levels.
@@ -49,7 +54,7 @@ def levels_chapter(study: LevelStudy, origin: Origin, prefix: str) -> Chapter:
     return Chapter(
         name=prefix,
         title=one_line(study.setup.title),
-        what="How many levels matter: a ladder of n_max",
+        what=_WHAT[study.atom],
         file=origin.name,
         ok=study.outcome.ok,
         outcome=study.outcome.value,

@@ -12,6 +12,7 @@ from ...distilled.table import EffectiveTable
 from ..rates import certificate_figure, rate_figure
 from .content import Block, Chapter, Facts, Origin, Picture, Section, Table
 from .drawing import picture
+from .helium_parts import table_facts
 from .wording import asked_section, one_line, origin_section, trust_section
 
 _SAMPLES_K = (9000.0, 6000.0, 4000.0, 3000.0, 2000.0, 1000.0, 300.0, 100.0, 30.0)
@@ -90,6 +91,7 @@ def _found(table: EffectiveTable) -> tuple[Block, ...]:
                 f"{math.exp(table.ratio_low):g} to {math.exp(table.ratio_high):g}",
             ),
             ("cells", f"{n_x} in ln T_r times {n_y} in ln(T_m/T_r)"),
+            *table_facts(table),
         )
     )
     kelvin = np.array([t for t in _SAMPLES_K if low <= t <= high] or [high])

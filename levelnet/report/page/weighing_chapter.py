@@ -8,6 +8,7 @@ from ...studies.weighing import Weighing
 from ..weights import file_names, make_weighing_figures
 from .content import Block, Chapter, Facts, Origin, Picture, Section, Table
 from .drawing import picture
+from .helium_parts import weighing_tables
 from .wording import (
     asked_section,
     number,
@@ -93,7 +94,8 @@ def _found(weighing: Weighing) -> tuple[Block, ...]:
     if parameters:
         caption = "By each parameter of the cosmology"
         blocks.append(Table(caption, ("parameter", *heads), parameters))
-    return (*blocks, *(_ranked(weighing, target) for target in targets))
+    ranked = (_ranked(weighing, target) for target in targets)
+    return (*blocks, *ranked, *weighing_tables(weighing))
 
 
 def _ranked(weighing: Weighing, target: str) -> Table:
@@ -127,6 +129,12 @@ def _pictures(weighing: Weighing, prefix: str) -> tuple[Picture, ...]:
             "Bars of the largest derivatives: processes and parameters, dipole transitions, cross "
             "sections and, where there is a budget, contributions to the error. The tables above "
             "have the numbers.",
+        )
+        said[f"helium-{name}"] = (
+            f"Rates of helium for {target}",
+            "Bars of the largest derivatives by rates of helium: lines to the ground state with "
+            "the continuum and He II, groups of He I, dipole transitions and cross sections of "
+            "terms. The tables above have the numbers.",
         )
     return tuple(
         picture(figure, f"{prefix}-{key.replace('.', '-').replace('_', '-')}", *said[key])
