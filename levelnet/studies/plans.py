@@ -32,6 +32,9 @@ from .weigh_budget import parts_of
 _HISTORIES_OF_A_WEIGHING = 3.0
 # The histories of a certificate, measured at n_max = 40; they hardly depend on it.
 _CERTIFICATE_S = 6.0
+# What helium adds to them, measured at n_max = 3 with lines by Sobolev; where hydrogen absorbs in
+# the lines an evaluation takes three times as long, and their escape is tabulated for a minute.
+_HELIUM_CERTIFICATE_S, _ABSORBED, _ESCAPE_TABLE_S = 24.0, 3.0, 60.0
 
 
 @dataclass(frozen=True, slots=True)
@@ -135,11 +138,22 @@ def plan_distill(
     check_distillable(setup, kept, tolerance)
     count = expected_reductions(setup, tolerance, certify)
     one = Cost(check_memory(setup, workers).memory_bytes, node_seconds(setup))
-    certificate = Cost(one.memory_bytes, _CERTIFICATE_S if certify else 0.0)
+    certificate = Cost(one.memory_bytes, _once_s(setup, certify))
     costs = [certificate, *[one] * count]
     what = f"table of setup {setup.digest}"
     plan = make_plan(what, [setup], costs, workers, certificate.seconds)
     return _about(setup, dataclasses.replace(plan, runs=count))
+
+
+def _once_s(setup: Setup, certify: bool) -> float:
+    """Time of what a table takes besides reductions of hydrogen, in s; one process does it."""
+    seconds = _CERTIFICATE_S if certify else 0.0
+    if not setup.helium_recombines:
+        return seconds
+    absorbs = setup.lines.helium == "continuum"
+    if certify:
+        seconds += _HELIUM_CERTIFICATE_S * (_ABSORBED if absorbs else 1.0)
+    return seconds + (_ESCAPE_TABLE_S if absorbs else 0.0)
 
 
 def plan_weigh(setup: Setup, n_targets: int, n_band: int) -> Plan:

@@ -5,6 +5,7 @@ Counts are closed forms; that times are right to a factor of two or three was me
 
 from __future__ import annotations
 
+import dataclasses
 import json
 from pathlib import Path
 from typing import Any
@@ -29,6 +30,7 @@ from levelnet.studies.sweep import compute_missing
 from levelnet.studies.sweep_cases import vary
 from levelnet.studies.sweep_plan import plan_sweep
 from levelnet.studies.weigh_budget import parts_of
+from tests.small_helium import helium_setup
 from tests.small_runs import small_setup
 from tests.whole.test_command_line import GOOD
 
@@ -66,6 +68,22 @@ def test_runs_of_each_command() -> None:
     with pytest.raises(InputError, match="tolerance = 1: allowed are"):
         plan_distill(setup, 1.0, True, 1)
     assert plan_weigh(setup, 3, 24).runs == 1
+
+
+def test_helium_is_in_the_plan_of_each_command() -> None:
+    setup = helium_setup(4)
+    inert = dataclasses.replace(setup, helium=type(setup.helium)(), lines=type(setup.lines)())
+    both, alone = escape_plans(setup), escape_plans(setup, "helium")
+    assert len(both) == 2
+    of_both, of_one = (plan_escape(setup, plans, (), 1) for plans in (both, alone))
+    assert of_both.runs == of_one.runs + plan_escape(setup, both[:1], (), 1).runs
+    rungs = (4, 5, 6, 8)
+    ladder = plan_levels(setup, rungs, (), (), 1, "helium")
+    assert ladder.runs == plan_levels(setup, rungs, (), (), 1).runs
+    assert plan_solve(setup).seconds > plan_solve(inert).seconds
+    table, plain = plan_distill(setup, 1e-8, True, 1), plan_distill(inert, 1e-8, True, 1)
+    assert table.seconds > plain.seconds + 20.0  # its histories step through helium
+    assert estimate(setup, 0, reduced=True).seconds < estimate(setup, 0).seconds
 
 
 def test_parts_of_a_weighing(monkeypatch: pytest.MonkeyPatch) -> None:
