@@ -7,6 +7,7 @@ from pathlib import Path
 from typing import Any, TypeVar, cast
 
 import numba
+from numba.extending import intrinsic
 
 Function = TypeVar("Function", bound=Callable[..., Any])
 
@@ -48,6 +49,34 @@ def inlined(function: Function) -> Function:
     A call hands every array over as seven numbers; that costs as much as a few hundred operations.
     """
     return cast(Function, numba.njit(inline="always", error_model="numpy")(function))
+
+
+def _without_owner(context: Any, builder: Any, kind: Any, value: Any) -> Any:
+    if isinstance(kind, numba.types.Array):
+        array = context.make_array(kind)(context, builder, value)
+        array.meminfo = array.meminfo.type(None)
+        return array._getvalue()
+    if isinstance(kind, numba.types.BaseTuple):
+        parts = [
+            _without_owner(context, builder, one, builder.extract_value(value, k))
+            for k, one in enumerate(kind.types)
+        ]
+        return context.make_tuple(builder, kind, parts)
+    return value
+
+
+@intrinsic
+def borrowed(typing_context: Any, value: Any) -> Any:
+    """Give arguments of a kernel (arrays, or tuples of them) without the counting of references.
+
+    Every call that hands over fifty arrays otherwise counts each up and down, which took a third of
+    the time of a history with helium. For arguments alone: the caller keeps them alive.
+    """
+
+    def code(context: Any, builder: Any, signature: Any, arguments: Any) -> Any:
+        return _without_owner(context, builder, signature.args[0], arguments[0])
+
+    return value(value), code
 
 
 def _compiled(function: Function, cache: bool) -> Function:
