@@ -52,11 +52,12 @@ def inlined(function: Function) -> Function:
 
 
 def _without_owner(context: Any, builder: Any, kind: Any, value: Any) -> Any:
-    if isinstance(kind, numba.types.Array):
+    types: Any = numba.types
+    if isinstance(kind, types.Array):
         array = context.make_array(kind)(context, builder, value)
         array.meminfo = array.meminfo.type(None)
         return array._getvalue()
-    if isinstance(kind, numba.types.BaseTuple):
+    if isinstance(kind, types.BaseTuple):
         parts = [
             _without_owner(context, builder, one, builder.extract_value(value, k))
             for k, one in enumerate(kind.types)
@@ -65,8 +66,7 @@ def _without_owner(context: Any, builder: Any, kind: Any, value: Any) -> Any:
     return value
 
 
-@intrinsic
-def borrowed(typing_context: Any, value: Any) -> Any:
+def _borrowed(typing_context: Any, value: Any) -> Any:
     """Give arguments of a kernel (arrays, or tuples of them) without the counting of references.
 
     Every call that hands over fifty arrays otherwise counts each up and down, which took a third of
@@ -77,6 +77,9 @@ def borrowed(typing_context: Any, value: Any) -> Any:
         return _without_owner(context, builder, signature.args[0], arguments[0])
 
     return value(value), code
+
+
+borrowed: Callable[[Any], Any] = cast(Any, intrinsic(_borrowed))
 
 
 def _compiled(function: Function, cache: bool) -> Function:

@@ -123,7 +123,7 @@ def find_start(
     At the top they need not: the state there has its lag to first order.
     """
     state = np.empty(4)
-    s, step = plasma.universe.today[0] - math.log(top_k), 0.02
+    s, step = plasma.universe.today[0] - math.log(top_k), 0.04
     end = plasma.universe.today[0] - math.log(bottom_k)
     while s + step < end:
         if not lagging_state(plasma, s + step, memory, desk, state) < tolerance:
@@ -187,10 +187,10 @@ def _step(
 
 
 @inlined
-def _slack(log_odds: float) -> float:
-    """How much more a fraction may err that is far below 1 per cent: up to 100 times."""
+def _slack(log_odds: float, most: float) -> float:
+    """How much more a fraction may err that is far below 1 per cent: up to `most` times."""
     least = math.exp(-abs(log_odds))
-    return min(100.0, max(1.0, math.sqrt(0.01 / least))) if least > 1e-30 else 100.0
+    return min(most, max(1.0, math.sqrt(0.01 / least))) if least > 1e-30 else most
 
 
 @kernel
@@ -227,9 +227,9 @@ def _integrate(
         # Only while lines light each other.
         limited = desk.mode[OF_FIRST] == NETWORK and place.radiation_k > plasma.limits[COLDEST_K]
         stages[6, :] = desk.rate
-        slack[0] = _slack(max(point[0], 0.0))  # what is left ionized at the end may not
-        slack[2] = _slack(point[2])
-        slack[3] = 1e6 if desk.mode[OF_SECOND] == SAHA else _slack(point[3])
+        slack[0] = _slack(max(point[0], 0.0), 100.0)  # what is left ionized at the end may not
+        slack[2] = _slack(point[2], 15.0)
+        slack[3] = 1e6 if desk.mode[OF_SECOND] == SAHA else _slack(point[3], 15.0)
         while True:
             if count + rejected >= times.shape[0]:
                 return TOO_MANY_STEPS, count, rejected
