@@ -287,9 +287,9 @@ def _couple(
     column = place.density * ground / place.hubble
     tabulated = lines.escape.shape[1] > 1
     if tabulated:
-        locate(lines, 0, math.log(column), room)
-        locate(lines, 1, place.hydrogen, room)
-        locate(lines, 2, math.log(place.radiation_k), room)
+        here = math.log(column), place.hydrogen, math.log(place.radiation_k)
+        for axis in range(3):
+            locate(lines, axis, here[axis], room)
     for k in range(lines.upper.shape[0]):
         i = lines.upper[k]
         exponent = lines.line[ENERGY, k] * inverse

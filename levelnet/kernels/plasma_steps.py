@@ -13,12 +13,14 @@ from .effective import (
     OUT_OF_RANGE,
     SAFETY,
     SHRINK,
+    SLOPES,
     STAGE_A,
     STAGE_C,
     STAGE_NODE,
     STAGE_TIME,
     STEP_TOO_SMALL,
     TOO_MANY_STEPS,
+    VALUES,
     interpolate,
     solve_many,
     split_odds,
@@ -95,7 +97,7 @@ def lagging_state(plasma: Plasma, s: float, memory: Memory, desk: Desk, state: F
     for i in range(4):
         drift[i, 0] = (state[i] - before[i]) / (2.0 * step)
     saha_state(plasma, s, state)
-    _ = evaluate(plasma, s, state, memory, desk, True)
+    _ = evaluate(plasma, s, state, memory, desk, SLOPES)
     largest = 0.0
     for i in range(4):
         if i != 1 and (i < 3 or plasma.levels == 1):
@@ -171,7 +173,7 @@ def _step(
                 if not abs(at[i]) < 700.0:
                     stages[8, :] = 1e300
                     return
-            _ = evaluate(plasma, s + STAGE_NODE[k] * h, at, memory, desk, False)
+            _ = evaluate(plasma, s + STAGE_NODE[k] * h, at, memory, desk, VALUES)
         for i in range(4):
             value = stages[6, i] if k == 0 else desk.rate[i]
             right[i] = value + h * STAGE_TIME[k] * desk.drift[i]
@@ -216,19 +218,19 @@ def _integrate(
         for ion in (OF_HYDROGEN, OF_FIRST):
             if desk.mode[ion] == SAHA:  # only for one step
                 desk.mode[ion] = NETWORK
-        place = evaluate(plasma, now, point, memory, desk, True)
+        place = evaluate(plasma, now, point, memory, desk, SLOPES)
         if desk.lines.outside[0] != 0:
             return OUTSIDE_ESCAPE, count, rejected
         if place.radiation_k > plasma.limits[COLDEST_K] and desk.mode[OF_FIRST] == NETWORK:
             _, neutral = split_odds(point[2])
             remember(plasma.first, plasma.lines, place, neutral, memory, desk.first, desk.lines)
         if choose_modes(plasma, place, point, desk):
-            place = evaluate(plasma, now, point, memory, desk, True)
+            place = evaluate(plasma, now, point, memory, desk, SLOPES)
         # Only while lines light each other.
         limited = desk.mode[OF_FIRST] == NETWORK and place.radiation_k > plasma.limits[COLDEST_K]
         stages[6, :] = desk.rate
         slack[0] = _slack(max(point[0], 0.0), 100.0)  # what is left ionized at the end may not
-        slack[2] = _slack(point[2], 15.0)
+        slack[2] = _slack(point[2], 4.0)
         slack[3] = 1e6 if desk.mode[OF_SECOND] == SAHA else _slack(point[3], 15.0)
         while True:
             if count + rejected >= times.shape[0]:
