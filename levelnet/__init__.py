@@ -35,12 +35,17 @@ if TYPE_CHECKING:
     from .history.result import History
     from .history.run import solve
     from .history.setup import Setup, load_setup
+    from .report.plot import plot
     from .store.read import read
     from .store.write import write
     from .studies.escape import escape_study
     from .studies.escape_records import EscapeStudy
     from .studies.level_records import LevelStudy
     from .studies.levels import level_study
+    from .studies.sweep import sweep
+    from .studies.sweep_cases import Cases, vary
+    from .studies.sweep_files import load_sweep
+    from .studies.sweep_record import Sweep
     from .studies.weigh import weigh
     from .studies.weighing import Weighing
 
@@ -48,6 +53,7 @@ __version__ = "0.1.0"
 
 _HOMES = {
     "AccuracyWarning": "errors",
+    "Cases": "studies.sweep_cases",
     "Cosmology": "background",
     "EffectiveRates": "distilled.effective",
     "EffectiveTable": "distilled.table",
@@ -62,6 +68,7 @@ _HOMES = {
     "Outcome": "errors",
     "Setup": "history.setup",
     "SolveError": "errors",
+    "Sweep": "studies.sweep_record",
     "Weighing": "studies.weighing",
     "distill": "distilled.build",
     "effective_rates": "distilled.effective",
@@ -73,18 +80,22 @@ _HOMES = {
     "history_from_table": "distilled.history",
     "level_study": "studies.levels",
     "load_setup": "history.setup",
+    "load_sweep": "studies.sweep_files",
     "lyman_resonances": "atomic.second_order",
     "photoionization_cross_section": "atomic.bound_free",
     "photoionization_rate": "atomic.bound_free",
+    "plot": "report.plot",
     "raman_spectrum_per_s_hz": "atomic.second_order",
     "rate_of_change": "distilled.local",
     "read": "store.read",
     "recombination_coefficient": "atomic.bound_free",
     "second_order_matrix_element": "atomic.second_order",
     "solve": "history.run",
+    "sweep": "studies.sweep",
     "two_photon_profile": "atomic.two_photon",
     "two_photon_rate": "atomic.two_photon",
     "two_photon_spectrum_per_s_hz": "atomic.second_order",
+    "vary": "studies.sweep_cases",
     "weigh": "studies.weigh",
     "with_expansion": "background",
     "write": "store.write",
@@ -92,6 +103,7 @@ _HOMES = {
 
 __all__ = [
     "AccuracyWarning",
+    "Cases",
     "Cosmology",
     "EffectiveRates",
     "EffectiveTable",
@@ -106,6 +118,7 @@ __all__ = [
     "Outcome",
     "Setup",
     "SolveError",
+    "Sweep",
     "Weighing",
     "__version__",
     "distill",
@@ -118,18 +131,22 @@ __all__ = [
     "history_from_table",
     "level_study",
     "load_setup",
+    "load_sweep",
     "lyman_resonances",
     "photoionization_cross_section",
     "photoionization_rate",
+    "plot",
     "raman_spectrum_per_s_hz",
     "rate_of_change",
     "read",
     "recombination_coefficient",
     "second_order_matrix_element",
     "solve",
+    "sweep",
     "two_photon_profile",
     "two_photon_rate",
     "two_photon_spectrum_per_s_hz",
+    "vary",
     "weigh",
     "with_expansion",
     "write",

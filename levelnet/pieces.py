@@ -13,6 +13,7 @@ import io
 import logging
 import numbers
 import os
+import sys
 import tempfile
 import time
 import zipfile
@@ -24,6 +25,7 @@ import numpy as np
 from numpy.lib import format as npy
 
 from .arrays import FloatArray
+from .errors import InputError
 
 _LOG = logging.getLogger(__name__)
 _HEADER = b"levelnet piece 1\n"
@@ -148,6 +150,44 @@ class FolderPieces:
                 total -= size
 
 
+class ResultFolder(FolderPieces):
+    """Pieces that are results and no cache: none is ever removed, and none is lost in silence.
+
+    Parameters
+    ----------
+    folder : Path or str
+        Made on the first :meth:`put`.
+    """
+
+    def __init__(self, folder: Path | str) -> None:
+        super().__init__(folder, sys.maxsize)
+        with contextlib.suppress(OSError):  # no such folder yet, or removed by another process
+            for left_over in self.folder.glob("*" + _TEMPORARY_SUFFIX):
+                if time.time() - left_over.stat().st_mtime > _DAY_S:
+                    left_over.unlink()
+
+    def put(self, key: str, arrays: Mapping[str, FloatArray]) -> None:
+        """Keep `arrays` under `key`; InputError, with its cause, where that cannot be done."""
+        try:
+            self.folder.mkdir(parents=True, exist_ok=True)
+            self._write(self._path(key), _pack(key, arrays))
+        except OSError as error:
+            reason = error.strerror or str(error)
+            raise InputError(f"{self.folder}: cannot be written: {reason}") from error
+
+
+def text_array(text: str) -> FloatArray:
+    """Text as an array that a piece can hold: the bytes of its UTF-8."""
+    return np.frombuffer(text.encode(), np.uint8).astype(np.float64)
+
+
+def array_text(array: FloatArray) -> str:
+    """Undo :func:`text_array`; ValueError for what it never gave."""
+    if array.ndim != 1 or not np.all((array >= 0.0) & (array < 256.0)):
+        raise ValueError("no text")
+    return array.astype(np.uint8).tobytes().decode()
+
+
 def default_cache_folder() -> Path:
     """Folder of the cache: LEVELNET_CACHE, else XDG_CACHE_HOME/levelnet, else ~/.cache/levelnet.
 
@@ -262,11 +302,28 @@ def _unpack(key: str, data: bytes) -> dict[str, FloatArray] | None:
     content = data[start:]
     if data[:start] != _HEADER + _checksum(key, content):
         return None
+    try:
+        return _arrays(content)
+    except Exception as error:  # zipfile and numpy raise nearly anything over nonsense
+        _LOG.debug("a piece with a right checksum, and not as levelnet packs it: %s", error)
+        return None
+
+
+def _arrays(content: bytes) -> dict[str, FloatArray]:
+    """Take arrays out of an archive; ValueError for what :func:`_pack` never makes."""
     arrays: dict[str, FloatArray] = {}
     with zipfile.ZipFile(io.BytesIO(content)) as archive:
-        for member in archive.namelist():
-            with archive.open(member) as file:
-                arrays[member.removesuffix(".npy")] = npy.read_array(file, allow_pickle=False)
+        members = archive.infolist()
+        # Neither compressed nor overlapping: nothing grows beyond the size of the file.
+        plain = all(one.compress_type == zipfile.ZIP_STORED for one in members)
+        if not plain or sum(one.file_size for one in members) > len(content):
+            raise ValueError("compressed, or larger inside than outside")
+        for one in members:
+            with archive.open(one) as file:
+                array = npy.read_array(file, allow_pickle=False)
+            if array.dtype != np.float64:
+                raise ValueError(f"{one.filename} holds {array.dtype}")
+            arrays[one.filename.removesuffix(".npy")] = array
     return arrays
 
 

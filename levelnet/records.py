@@ -72,12 +72,24 @@ def from_mapping(cls: type) -> BeforeValidator:
 
 def build(cls: type[T], values: Mapping[str, object]) -> T:
     """Make a checked record from nested mappings; one InputError lists every complaint."""
+    made = attempt(cls, values)
+    if isinstance(made, Complaints):
+        raise InputError("; ".join(made))
+    return made
+
+
+class Complaints(tuple[str, ...]):
+    """Everything wrong with the values of a record, one text each."""
+
+
+def attempt(cls: type[T], values: Mapping[str, object]) -> T | Complaints:
+    """Make a checked record from nested mappings, or say every complaint."""
     # Through JSON, where strict checking still lets a mapping stand for a nested record.
     text = json.dumps(values, default=str)
     try:
         return TypeAdapter(cls).validate_json(text)
     except ValidationError as error:
-        raise InputError(explain(error)) from None
+        return Complaints(_complaint(item, None) for item in error.errors(include_url=False))
 
 
 def explain(error: ValidationError, record: Any = None) -> str:

@@ -20,7 +20,8 @@ from levelnet.escape.helium_treatment import HeliumTreatment
 from levelnet.escape.treatment import Sobolev
 from levelnet.history.atom import resonance_lines
 from levelnet.history.equations import SlowEquations
-from levelnet.history.helium import Around, HeliumEquations, IonNetwork
+from levelnet.history.helium import HeliumEquations
+from levelnet.history.ion_network import Around, NeutralHelium
 from levelnet.network.helium import HeliumReduction, tabulate_helium
 from levelnet.network.ladder import hydrogen_ladder
 from levelnet.network.tabulation import TabulatedReduction, tabulate
@@ -54,7 +55,7 @@ def helium_equations(
     ladders, kept = small_ladders(higher, n_max), _hydrogen().kept
     decay = ladders.kept_position.tolist().index(ladders.levels.index(2, 0, 0))
     # 2 1S decays at 51.02 s^-1 (Derevianko & Johnson 1997, from memory).
-    first = IonNetwork(_helium(higher, n_max), lines, treatment, decay, 51.02)
+    first = NeutralHelium(_helium(higher, n_max), lines, treatment, decay, 51.02)
     energies = float(ladders.levels.ionization_energy_ev[0]), HE_II_EV
     past = HeliumPast.of(lines) if lines.fed else None
     helium = HeliumEquations(first, None, energies, past)
@@ -97,7 +98,7 @@ def run(equations: SlowEquations) -> Trajectory:
     equations.remember(start, state)
     return integrate(
         equations.rate,
-        equations.jacobian,
+        equations.slopes,
         start,
         state,
         [-math.log1p(z) for z in REDSHIFTS],

@@ -8,13 +8,18 @@ from functools import lru_cache
 import numpy as np
 
 from levelnet.escape.lines import Lines
+from levelnet.history.result import Channels
 from levelnet.history.setup import Setup
-from levelnet.studies.escape import run_plan
+from levelnet.studies.escape import _assemble, run_plan
+from levelnet.studies.escape_helium_plan import helium_plan
 from levelnet.studies.escape_plan import Plan, Variant
 from levelnet.studies.escape_records import EscapeStudy
+from levelnet.studies.escape_run import VariantResult
+from levelnet.studies.level_records import Question
 from tests.small_runs import small_setup
 
 SWITCHED = ("stimulated", "feedback")
+_CHANNELS = ("2 1S-1 1S", "2 1P-1 1S")
 
 
 def cheap_plan(setup: Setup) -> Plan:
@@ -71,3 +76,36 @@ def with_differences(peaks: dict[str, float], own: float = 1e-6) -> EscapeStudy:
             error, free_electron_fraction=np.full(len(study.redshift), own)
         ),
     )
+
+
+@lru_cache(maxsize=1)
+def helium_study() -> EscapeStudy:
+    """Variant k is off by k times 1e-4 at z above 1000, and not at all below."""
+    outer = cheap_study()
+    setup = dataclasses.replace(
+        outer.setup, helium=dataclasses.replace(outer.setup.helium, n_max=3)
+    )
+    plan, high = helium_plan(setup), outer.redshift > 1000.0
+    x_e = outer.variants.free_electron_fraction[outer.reference]
+    share = np.tile([0.3, 0.7], (len(x_e), 1))
+    results = [
+        VariantResult(
+            x_e * (1.0 + 1e-4 * ((k - plan.reference) % len(plan.variants)) * high),
+            outer.variants.matter_temperature_k[outer.reference],
+            outer.observable_names,
+            outer.observable_units,
+            outer.variants.observable[outer.reference],
+            Channels(_CHANNELS, 1e-15 * share, share, share),
+            None,
+            outer.outcome,
+        )
+        for k in range(len(plan.variants))
+    ]
+    return _assemble(setup, plan, results)
+
+
+def both(question: Question | None = None) -> EscapeStudy:
+    """The cheap study with that of helium in it, which is asked `question`."""
+    inner = dataclasses.replace(helium_study(), question=question)
+    setup = dataclasses.replace(cheap_study().setup, helium=inner.setup.helium)
+    return dataclasses.replace(cheap_study(), setup=setup, helium=inner)

@@ -21,6 +21,7 @@ from levelnet.store import (
     DISTILLED_LAYOUT,
     ESCAPE_LAYOUT,
     LEVEL_LAYOUT,
+    SWEEP_LAYOUT,
     TABLE_LAYOUT,
     WEIGHING_LAYOUT,
 )
@@ -69,7 +70,14 @@ KINDS = {
     "levelnet history": groups_of(tuple(SPECIES_GROUPS), with_field=True, with_helium=True),
     **{
         kind.name: (*kind.required, *kind.optional)
-        for kind in (LEVEL_LAYOUT, ESCAPE_LAYOUT, WEIGHING_LAYOUT, TABLE_LAYOUT, DISTILLED_LAYOUT)
+        for kind in (
+            LEVEL_LAYOUT,
+            ESCAPE_LAYOUT,
+            WEIGHING_LAYOUT,
+            SWEEP_LAYOUT,
+            TABLE_LAYOUT,
+            DISTILLED_LAYOUT,
+        )
     },
 }
 
@@ -156,7 +164,8 @@ def test_nothing_is_left_to_fill() -> None:
 def example(start: str) -> str:
     """Give the block of Python that begins with `start`."""
     blocks = re.findall(r"```python\n(.*?)```", README, re.S)
-    (found,) = (block for block in blocks if block.startswith(start))
+    # Two begin with the import alone; the first of them is meant.
+    found = next(block for block in blocks if block.startswith(start))
     return str(found)
 
 
@@ -180,6 +189,27 @@ def first_example(tmp_path_factory: pytest.TempPathFactory) -> dict[str, Any]:
 
 def test_python_example_runs(first_example: dict[str, Any]) -> None:
     assert repr(first_example["again"]) == repr(first_example["history"])
+
+
+def test_notebook_example_runs(
+    first_example: dict[str, Any], capsys: pytest.CaptureFixture[str]
+) -> None:
+    run_example(dict(first_example), "levelnet.plot(history)")
+    assert "%" in capsys.readouterr().out
+
+
+def test_sweep_example_runs(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.chdir(tmp_path)
+    names: dict[str, Any] = {}
+    run_example(names, "import levelnet\n\ncases")
+    assert names["swept"].not_ok == ()
+    assert levelnet.read("sweep.h5")["sound_horizon_mpc"].shape == (2,)
+    # The file beside it is one of the program's too.
+    toml = next(b for b in re.findall(r"```toml\n(.*?)```", README, re.S) if "[combine]" in b)
+    setup = re.findall(r"```toml\n(.*?)```", README, re.S)[0]
+    (tmp_path / "setup.toml").write_text(setup)
+    (tmp_path / "sweep.toml").write_text(toml)
+    assert len(levelnet.load_sweep("sweep.toml")) == 3 * 4 * 3
 
 
 def test_error_budget_example_runs(first_example: dict[str, Any]) -> None:

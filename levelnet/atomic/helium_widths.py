@@ -37,8 +37,8 @@ class OtherDecays:
         exponent = self.energy_ev / (const.BOLTZMANN_EV_K * radiation_temperature_k)
         inverse = 1.0 / -np.expm1(-exponent)
         photons = np.exp(-exponent) * inverse
-        slope = np.sum(self.rate_per_s * exponent * photons * inverse, axis=1)
-        return self.each(radiation_temperature_k).sum(axis=1), slope
+        total = np.sum(self.rate_per_s * (self.spontaneous + photons), axis=1)
+        return total, np.sum(self.rate_per_s * exponent * photons * inverse, axis=1)
 
     def each(self, radiation_temperature_k: float) -> FloatArray:
         """Rates out of each level by every line, s^-1; shape (n_upper, n_others)."""

@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING, Any
 
 from ..errors import InputError
 from ..quantities import OBSERVABLES
-from .output import aligned, sample_rows
+from .output import aligned
 
 if TYPE_CHECKING:
     from ..history.result import History
@@ -47,7 +47,9 @@ def comparison_values(
 
     What is not reached is NaN.
     """
-    rows = [k for k in sample_rows(new) if k < len(old.redshift)]
+    from ..history.samples import sample_rows
+
+    rows = [k for k in sample_rows(new.redshift) if k < len(old.redshift)]
     before, after = (one.free_electron_fraction[rows] for one in (old, new))
     marks = {
         name: _change(getattr(old.milestones, name), getattr(new.milestones, name))

@@ -19,8 +19,30 @@ _PATIENCE_S = 2.0  # shorter work needs no bar
 
 
 def one_line(text: str) -> str:
-    """Fold `text` into one line."""
-    return " ".join(text.split())
+    """Fold `text` into one line, as :func:`harmless`."""
+    return harmless(" ".join(text.split()))
+
+
+def harmless(text: str) -> str:
+    """Show what a terminal could obey by its code in place of sending it; lines stay lines."""
+    return "".join(_shown(letter) for letter in text)
+
+
+def _shown(letter: str) -> str:
+    # Half a surrogate stands for a byte of a file name; the stream itself knows what to do with it.
+    fine = letter.isprintable() or letter == "\n" or 0xDC80 <= ord(letter) <= 0xDCFF
+    return letter if fine else letter.encode("unicode_escape").decode("ascii")
+
+
+class Terminated(KeyboardInterrupt):
+    """SIGTERM came: like Ctrl-C, with an exit code of its own."""
+
+
+def end_workers() -> None:
+    """Kill the worker processes, which would otherwise be waited for until their tasks are done."""
+    if processes := sys.modules.get("multiprocessing"):
+        for one in processes.active_children():
+            one.kill()
 
 
 class Console:
@@ -34,7 +56,7 @@ class Console:
 
     def __init__(self, quiet: bool = False) -> None:
         self.quiet = quiet
-        self.interrupted = False
+        self.ending: type[KeyboardInterrupt] | None = None
 
     def notice(self, text: str) -> None:
         """Say something that is neither result nor complaint."""
@@ -108,8 +130,8 @@ class ProgressBar:
 
     def __call__(self, stage: str, fraction: float) -> None:
         """Note that `stage` is done to `fraction`, 0 to 1."""
-        if self._console.interrupted:
-            raise KeyboardInterrupt
+        if self._console.ending is not None:
+            raise self._console.ending
         with self._lock:
             self._state = (stage, fraction)
             if self._bar is not None:

@@ -12,9 +12,10 @@ from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 from ..errors import InputError
-from .console import Console
+from .console import Console, end_workers
 from .output import print_result
 from .paths import check_target
+from .plan import add_plan, print_plan
 from .solve import cache_pieces
 from .table_output import table_summary, table_values
 
@@ -77,6 +78,7 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
     parser.add_argument(
         "--no-cache", action="store_true", help="neither read nor fill the cache of reductions"
     )
+    add_plan(parser)
     parser.add_argument("--force", action="store_true", help="overwrite table and exports")
 
 
@@ -88,15 +90,24 @@ def run(options: argparse.Namespace, console: Console) -> int:
     kept = None if options.kept is None else kept_levels(options.kept)
     target = options.output or Path(f"{options.setup.stem}-table.h5")
     languages = tuple(dict.fromkeys(options.export or ()))
-    check_target(target, options.force, options.setup)
+    check_target(target, options.force or options.plan, options.setup)
     check_exports(target, languages, options.force)
+    if languages:
+        from ..distilled.kept import check_exported_setup
+
+        check_exported_setup(setup)
+    workers = worker_count(options.workers)
+    if options.plan:
+        from ..studies.plans import plan_distill
+
+        plan = plan_distill(setup, options.tolerance, not options.no_certificate, workers, kept)
+        return print_plan(plan, options.json)
     pieces = None if options.no_cache else cache_pieces(console)
 
     from ..distilled.build import distill
     from ..store import write
 
     start = time.monotonic()
-    workers = worker_count(options.workers)
     with console.progress() as progress, worker_processes(workers) as executor:
         table = distill(
             setup,
@@ -176,6 +187,9 @@ def worker_processes(count: int) -> Iterator[Executor | None]:
     executor = process_pool(count)
     try:
         yield executor
+    except KeyboardInterrupt:
+        end_workers()  # those that were being started when the signal came
+        raise
     finally:
         executor.shutdown(wait=True, cancel_futures=True)
 

@@ -8,19 +8,20 @@ import time
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
+from ..studies.answers import escape_answer
 from .console import Console
 from .distill import worker_count, worker_processes
 from .escape_output import escape_summary, escape_values
 from .output import print_result, time_text
 from .paths import check_folder, check_target
+from .plan import print_plan
 from .solve import cache_pieces
-from .study import WITHIN, add_files, add_question, add_running, asked_range, asked_requirement
+from .study import add_files, add_question, add_running, asked_range, asked_requirement
 
 if TYPE_CHECKING:
     from ..history.setup import Setup
     from ..studies.escape_plan import Plan
     from ..studies.escape_records import EscapeStudy
-    from ..studies.escape_verdict import EscapeDemands, EscapeVerdict
     from ..studies.level_records import Question
     from ..studies.requirement import Requirement
 
@@ -63,7 +64,7 @@ def run(options: argparse.Namespace, console: Console) -> int:
     requirement = asked_requirement(options.requirement, setup)
     plans = _plans(setup, options)
     target = options.output or Path(f"{options.setup.stem}-escape.h5")
-    check_target(target, options.force, options.setup)
+    check_target(target, options.force or options.plan, options.setup)
     asked = () if requirement is None else tuple(requirement.to_toml().splitlines())
     questions = [
         Question(
@@ -74,6 +75,13 @@ def run(options: argparse.Namespace, console: Console) -> int:
         for plan in plans
     ]
     _check_place(options, plans)
+    if options.plan:
+        from ..studies.plans import plan_escape
+
+        ends = [z for one in questions for z in (one.low, one.high)]
+        return print_plan(
+            plan_escape(setup, plans, ends, worker_count(options.workers)), options.json
+        )
     start = time.monotonic()
     study = _study(setup, plans, requirement, questions, options, console)
     seconds = time.monotonic() - start
@@ -157,31 +165,16 @@ def _study(
         )
 
 
-def judged(study: EscapeStudy) -> tuple[EscapeVerdict, EscapeDemands | None]:
-    """Answer what the study was asked; if nothing was, the usual on as much as it covers."""
-    from ..studies.escape_notes import asked_range
-    from ..studies.escape_verdict import escape_demands, escape_verdict
-    from ..studies.requirement import parse_requirement
-
-    asked = study.question
-    within = WITHIN if asked is None else asked.within
-    found = escape_verdict(study, within, *asked_range(study))
-    if asked is None or not asked.requirement:
-        return found, None
-    requirement = parse_requirement("\n".join(asked.requirement), "requirement", None)
-    return found, escape_demands(study, requirement)
-
-
 def study_values(study: EscapeStudy) -> dict[str, Any]:
     """Collect a study and the one in it with their verdicts."""
     helium = None if study.helium is None else study_values(study.helium)
-    return escape_values(study, *judged(study)) | {"helium": helium}
+    return escape_values(study, *escape_answer(study)) | {"helium": helium}
 
 
 def study_text(study: EscapeStudy) -> str:
     """Return the summaries of a study and of the one in it."""
-    texts = [escape_summary(one, *judged(one)) for one in (study, study.helium) if one is not None]
-    return "\n\n".join(texts)
+    both = [one for one in (study, study.helium) if one is not None]
+    return "\n\n".join(escape_summary(one, *escape_answer(one)) for one in both)
 
 
 def save_figures(

@@ -15,8 +15,6 @@ _FRACTIONS = (
     "singly_ionized_helium_fraction",
     "doubly_ionized_helium_fraction",
 )
-# Redshifts at which the lines of He I are worth a row.
-_SAMPLES = (3000.0, 2600.0, 2300.0, 2000.0, 1900.0, 1800.0, 1700.0, 1600.0)
 _COLUMNS = {
     "share": ("share", "{:.2e}"),
     "optical_depth": ("depth", "{:.2e}"),
@@ -43,10 +41,12 @@ def helium_values(history: History, rows: list[int] | IntArray) -> dict[str, Any
     """Fractions at some outputs and how it went, under the names of the fields; None: inert."""
     if history.helium is None:
         return None
+    from ..history.samples import helium_rows
+
     found: dict[str, Any] = {"n_max": history.setup.helium.n_max}
     found |= {name: getattr(history, name)[rows] for name in _FRACTIONS}
     found |= {name: getattr(history.helium, name) for name in _HOW}
-    lines, rows = history.helium.lines, helium_rows(history)
+    lines, rows = history.helium.lines, helium_rows(history.redshift)
     figures = [one.name for one in dataclasses.fields(lines) if one.name != "names"]
     figures_of_lines = {
         name: {figure: getattr(lines, figure)[rows, k] for figure in figures}
@@ -55,11 +55,12 @@ def helium_values(history: History, rows: list[int] | IntArray) -> dict[str, Any
     return found | {"line_redshift": history.redshift[rows], "line_figures": figures_of_lines}
 
 
-def helium_rows(history: History) -> list[int]:
-    """Outputs nearest to a few redshifts at which He I recombines; each once, ascending."""
-    z = history.redshift
-    wanted = [one for one in _SAMPLES if z[-1] <= one <= z[0]]
-    return sorted({int(abs(z - one).argmin()) for one in wanted})
+def helium_fraction_columns(history: History) -> dict[str, FloatArray]:
+    """Fractions of helium nuclei under their symbols; nothing where helium is inert."""
+    if history.helium is None:
+        return {}
+    names = "x_HeI", "x_HeII", "x_HeIII"
+    return {name: getattr(history, one) for name, one in zip(names, _FRACTIONS, strict=True)}
 
 
 def helium_line_rows(history: History) -> list[tuple[str, ...]]:
@@ -67,7 +68,9 @@ def helium_line_rows(history: History) -> list[tuple[str, ...]]:
 
     Nothing where helium is inert or no output lies where He I recombines.
     """
-    rows = helium_rows(history)
+    from ..history.samples import helium_rows
+
+    rows = helium_rows(history.redshift)
     if history.helium is None or not rows:
         return []
     lines = history.helium.lines
@@ -99,6 +102,7 @@ def helium_text(history: History) -> str:
     ends = {"left": np.nan, "right": np.nan}
     half = float(np.interp(0.5, history.neutral_helium_fraction, history.redshift, **ends))
     return (
-        f"half neutral at z = {half:.0f}; hand-over lags {how.handover_departure:.1e} and "
+        ("" if np.isnan(half) else f"half neutral at z = {half:.0f}; ")
+        + f"hand-over lags {how.handover_departure:.1e} and "
         f"{how.handover_ion_departure:.1e}; charge and nuclei to {how.closure_error:.0e}"
     )

@@ -7,14 +7,12 @@ import math
 from typing import TYPE_CHECKING, Any
 
 from ..quantities import OBSERVABLES
-from .output import aligned, nearest_rows, plain_values, row
+from .output import aligned, plain_values, row
 
 if TYPE_CHECKING:
     from ..studies.level_records import LevelStudy
     from ..studies.level_requirement import Demands
     from ..studies.verdict import Verdict
-
-_HELIUM_SAMPLES = (3000.0, 2500.0, 2300.0, 2200.0, 2100.0, 2000.0, 1900.0, 1800.0, 1700.0, 1600.0)
 
 
 def level_values(study: LevelStudy, found: Verdict, met: Demands | None = None) -> dict[str, Any]:
@@ -163,9 +161,10 @@ def _rung_lines(study: LevelStudy, found: Verdict) -> list[str]:
 
 
 def _limit_lines(study: LevelStudy) -> list[str]:
+    from ..history.samples import sample_rows
+
     limit, longest = study.limit.free_electron_fraction, study.rungs.n_max[-1]
     last = study.rungs.free_electron_fraction[-1]
-    samples = (_HELIUM_SAMPLES,) if study.atom == "helium" else ()
     head = ("z", "x_e, all levels", "error bar", f"x_e({longest})/x_e - 1", "exponent")
     body = [
         (
@@ -175,7 +174,7 @@ def _limit_lines(study: LevelStudy) -> list[str]:
             f"{last[k] / limit.value[k] - 1.0:+.2e}",
             f"{limit.exponent[k]:.2f}" if limit.fitted[k] else "no law",
         )
-        for k in nearest_rows(study.redshift, *samples)
+        for k in sample_rows(study.redshift, study.atom)
     ]
     return aligned([head, *body], right=True)
 

@@ -9,20 +9,20 @@ from pathlib import Path
 from typing import TYPE_CHECKING
 
 from ..errors import InputError
+from ..studies.answers import level_answer
 from .console import Console
 from .distill import worker_count, worker_processes
 from .level_output import level_summary, level_values
 from .output import print_result, size_text, time_text
 from .paths import check_folder, check_target
+from .plan import print_plan
 from .solve import cache_pieces
-from .study import WITHIN, add_files, add_question, add_running, asked_range, asked_requirement
+from .study import add_files, add_question, add_running, asked_range, asked_requirement
 
 if TYPE_CHECKING:
     from ..history.setup import Setup
     from ..studies.level_records import LevelStudy, Question
-    from ..studies.level_requirement import Demands
     from ..studies.requirement import Requirement
-    from ..studies.verdict import Verdict
 
 NAME = "levels"
 SUMMARY = "find out how many levels of hydrogen, or of helium, matter"
@@ -70,15 +70,22 @@ def run(options: argparse.Namespace, console: Console) -> int:
     rungs = None if options.rungs is None else whole_numbers("--rungs", options.rungs)
     resolve = () if options.resolve is None else whole_numbers("--resolve", options.resolve)
     target = options.output or Path(f"{options.setup.stem}-levels.h5")
-    check_target(target, options.force, options.setup)
+    check_target(target, options.force or options.plan, options.setup)
     asked = () if requirement is None else tuple(requirement.to_toml().splitlines())
     question = Question(options.within, *asked_range(setup, options, options.atom), asked)
     ladder = _checked_ladder(setup, rungs, resolve, options)
+    if options.plan:
+        from ..studies.plans import plan_levels
+
+        ends = question.low, question.high
+        workers = worker_count(options.workers)
+        plan = plan_levels(setup, ladder, resolve, ends, workers, options.atom)
+        return print_plan(plan, options.json)
     start = time.monotonic()
     study = _study(setup, ladder, resolve, requirement, question, options, console)
     seconds = time.monotonic() - start
     study = dataclasses.replace(study, question=question)
-    found, met = judged(study)
+    found, met = level_answer(study)
 
     from ..store import write
 
@@ -171,23 +178,6 @@ def _study(
             pieces=pieces,
             progress=progress,
         )
-
-
-def judged(study: LevelStudy) -> tuple[Verdict, Demands | None]:
-    """Answer what the study was asked; if nothing was, the usual on as much as it covers."""
-    from ..studies.level_checks import covered
-    from ..studies.level_requirement import demands
-    from ..studies.requirement import parse_requirement
-    from ..studies.verdict import verdict
-
-    asked = study.question
-    if asked is None:
-        return verdict(study, WITHIN, *covered(study.redshift, study.atom)), None
-    found = verdict(study, asked.within, asked.low, asked.high)
-    if not asked.requirement:
-        return found, None
-    requirement = parse_requirement("\n".join(asked.requirement), "requirement", None)
-    return found, demands(study, requirement)
 
 
 def save_figures(

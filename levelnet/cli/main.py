@@ -11,16 +11,28 @@ import threading
 from collections.abc import Callable, Iterator, Sequence
 from contextlib import contextmanager, suppress
 from types import FrameType
-from typing import NoReturn
+from typing import Any, NoReturn
 
 from .. import __version__
 from ..errors import InputError, LevelnetError
-from . import demo, distill, escape, history, levels, show, solve, tables, weigh
-from .console import Console, one_line
+from . import (
+    demo,
+    distill,
+    escape,
+    history,
+    levels,
+    report,
+    show,
+    solve,
+    sweep,
+    tables,
+    weigh,
+)
+from .console import Console, Terminated, end_workers, one_line
 
 # Input was good, but the disk was not: a failure and no bad input.
 _DISK_TROUBLE = {errno.ENOSPC, errno.EDQUOT, errno.EIO, errno.EFBIG, errno.EROFS}
-OK, FAILED, BAD_INPUT, INTERRUPTED = 0, 1, 2, 130
+OK, FAILED, BAD_INPUT, INTERRUPTED, TERMINATED = 0, 1, 2, 130, 143
 
 _DESCRIPTION = """\
 Ionization history and level populations of hydrogen through cosmological recombination.
@@ -29,14 +41,16 @@ Ionization history and level populations of hydrogen through cosmological recomb
   levelnet solve setup.toml          solve a setup, write setup.h5
   levelnet show setup.h5 --plot      sum up a result, draw its figures
   levelnet weigh setup.toml          weigh every rate: what each does to x_e(z)
+  levelnet sweep sweep.toml          compute many setups, here or on a cluster
   levelnet distill setup.toml        distil its atom to effective rates, write setup-table.h5
   levelnet history setup-table.h5    make a history from them in milliseconds
   levelnet levels setup.toml         find out how many levels matter
   levelnet escape setup.toml         find out which treatment of the Lyman lines is good enough
+  levelnet report setup.h5           set results out as one HTML page
 """
 _EXIT_CODES = (
     "exit codes: 0 ok; 1 computed but not to the tolerance, or failed; 2 bad usage or input; "
-    "130 interrupted"
+    "130 interrupted; 143 terminated"
 )
 
 
@@ -59,7 +73,19 @@ def build_parser() -> argparse.ArgumentParser:
     )
     parser.add_argument("--version", action="version", version=f"levelnet {__version__}")
     commands = parser.add_subparsers(metavar="COMMAND", parser_class=_Parser)
-    for module in (solve, show, levels, escape, weigh, distill, history, tables, demo):
+    for module in (
+        solve,
+        show,
+        levels,
+        escape,
+        weigh,
+        sweep,
+        distill,
+        history,
+        report,
+        tables,
+        demo,
+    ):
         command = commands.add_parser(
             module.NAME,
             help=module.SUMMARY,
@@ -86,7 +112,8 @@ def main(arguments: Sequence[str] | None = None) -> int:
     Returns
     -------
     int
-        Exit code: 0 ok, 1 computed but not ok or failed, 2 bad input, 130 interrupted.
+        Exit code: 0 ok, 1 computed but not ok or failed, 2 bad input, 130 interrupted, 143
+        terminated.
     """
     for stream in (sys.stdout, sys.stderr):
         # File names and titles are the user's: a character the terminal lacks must not end the run.
@@ -104,7 +131,7 @@ def main(arguments: Sequence[str] | None = None) -> int:
 def _guarded(command: Callable[[], int], console: Console, debug: bool) -> int:
     """Run `command`; every way to fail becomes one line and an exit code."""
     try:
-        with _remembered_interrupts(console), console.one_line_warnings():
+        with _remembered_signals(console), console.one_line_warnings():
             code = command()
             sys.stdout.flush()
         return code
@@ -112,6 +139,9 @@ def _guarded(command: Callable[[], int], console: Console, debug: bool) -> int:
         # The reader (head, a pager) has what it wanted.
         _drop_stdout()
         return OK
+    except Terminated:
+        console.error("terminated; no file was left half-written", kind="")
+        return TERMINATED
     except KeyboardInterrupt:
         console.error("interrupted; no file was left half-written", kind="")
         return INTERRUPTED
@@ -146,21 +176,30 @@ def _drop_stdout() -> None:
 
 
 @contextmanager
-def _remembered_interrupts(console: Console) -> Iterator[None]:
-    """Remember Ctrl-C: raised inside a compiler's callback, Python would drop the exception."""
+def _remembered_signals(console: Console) -> Iterator[None]:
+    """Let Ctrl-C and SIGTERM end the command in order, its worker processes with it.
+
+    Both are remembered: raised inside a compiler's callback, Python would drop the exception.
+    """
 
     def remember(number: int, frame: FrameType | None) -> None:
-        console.interrupted = True
-        signal.default_int_handler(number, frame)
+        console.ending = Terminated if number == signal.SIGTERM else KeyboardInterrupt
+        end_workers()
+        raise console.ending
 
-    # Only where Ctrl-C is at work (a job started to ignore it goes on ignoring it), and only in the
-    # main thread, where Python allows it.
-    at_work = signal.getsignal(signal.SIGINT) is signal.default_int_handler
-    if not at_work or threading.current_thread() is not threading.main_thread():
-        yield
-        return
-    signal.signal(signal.SIGINT, remember)
+    # Only where a signal would end the program (a job started to ignore it goes on ignoring it),
+    # and only in the main thread, where Python allows it.
+    usual: dict[signal.Signals, Any] = {
+        signal.SIGINT: signal.default_int_handler,
+        signal.SIGTERM: signal.SIG_DFL,
+    }
+    found = [number for number, one in usual.items() if signal.getsignal(number) is one]
+    if threading.current_thread() is not threading.main_thread():
+        found = []
+    for number in found:
+        signal.signal(number, remember)
     try:
         yield
     finally:
-        signal.signal(signal.SIGINT, signal.default_int_handler)
+        for number in found:
+            signal.signal(number, usual[number])

@@ -7,19 +7,18 @@ import json
 import math
 from collections.abc import Callable, Sequence
 from pathlib import Path
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING, Any, Literal
 
 from ..constants import SECONDS_PER_YEAR
 from ..quantities import OBSERVABLES
-from .helium_output import helium_line_rows, helium_text, helium_values
+from .console import harmless
+from .helium_output import helium_fraction_columns, helium_line_rows, helium_text, helium_values
 from .line_output import line_rows, line_values
 
 if TYPE_CHECKING:
-    from ..arrays import FloatArray
     from ..history.result import Diagnostics, History, RadiationField
     from ..history.setup import Setup
 
-_SAMPLES = (1700.0, 1400.0, 1300.0, 1200.0, 1100.0, 1000.0, 800.0, 500.0, 200.0, 100.0, 50.0, 20.0)
 _CHANNELS_SHOWN = 6
 
 
@@ -54,13 +53,13 @@ def print_result(
         more = {"file": file, "written": written, "seconds": seconds}
         print_json(values() | {name: one for name, one in more.items() if one is not None})
         return
-    print(text())
+    print(harmless(text()))  # titles and names come from files
     rows = [] if file is None else [("file", str(file))]
     rows += [("written", str(path)) for path in written or ()]
     if seconds is not None:
         rows.append(("time", time or time_text(seconds)))
     for label, said in rows:
-        print(row(label, said))
+        print(harmless(row(label, said)))
 
 
 def print_json(values: object) -> None:
@@ -106,26 +105,12 @@ def time_text(seconds: float) -> str:
     return f"{seconds / 3600.0:.1f} h"
 
 
-def sample_rows(history: History) -> list[int]:
-    """Find the outputs nearest to a few round redshifts; indices, each once, ascending."""
-    return nearest_rows(history.redshift)
-
-
-def nearest_rows(redshift: FloatArray, samples: tuple[float, ...] = _SAMPLES) -> list[int]:
-    """Find the same in a descending array of redshifts, or those nearest to other `samples`."""
-    import numpy as np
-
-    low, high = redshift[-1], redshift[0]
-    wanted = [z for z in samples if low <= z <= high] or [float(high)]
-    nearest = {int(np.argmin(np.abs(redshift - z))) for z in wanted}
-    # The last output is what most readers ask for.
-    return sorted(nearest | {len(redshift) - 1})
-
-
 def history_values(history: History) -> dict[str, Any]:
     """Collect what the summary shows, under the names of the result's fields."""
+    from ..history.samples import sample_rows
+
     marks, how, setup = history.milestones, history.diagnostics, history.setup
-    rows = sample_rows(history)
+    rows = sample_rows(history.redshift, _atom(history))
     return {
         "title": setup.title,
         "setup_digest": setup.digest,
@@ -176,6 +161,16 @@ def atom_size(setup: Setup) -> str:
     return f"n_max = {n_max}" + (f", whole shells above n = {top}" if top < n_max else "")
 
 
+def _helium_size(setup: Setup) -> str:
+    """Highest n of helium, where it has levels."""
+    return f"helium n_max = {setup.helium.n_max}, " if setup.helium_recombines else ""
+
+
+def _atom(history: History) -> Literal["hydrogen", "both"]:
+    """Whose recombination a summary shows."""
+    return "hydrogen" if history.helium is None else "both"
+
+
 def summary_text(history: History) -> str:
     """Return the summary of a history as lines of plain text."""
     setup = history.setup
@@ -184,7 +179,7 @@ def summary_text(history: History) -> str:
         setup.title or "(no title)",
         row(
             "setup",
-            f"{setup.digest}: hydrogen {atom_size(setup)} ({n_levels} levels), "
+            f"{setup.digest}: hydrogen {atom_size(setup)}, {_helium_size(setup)}{n_levels} levels, "
             f"lines {setup.lines.hydrogen}, z = {history.redshift[0]:g} to "
             f"{history.redshift[-1]:g} ({len(history.redshift)} outputs)",
         ),
@@ -193,7 +188,9 @@ def summary_text(history: History) -> str:
     ]
     body = [*_milestone_lines(history), "", *_sample_lines(history), "", *_share_lines(history)]
     if history.lines.names:
-        table = line_rows(history, sample_rows(history))
+        from ..history.samples import sample_rows
+
+        table = line_rows(history, sample_rows(history.redshift))
         body += ["", *aligned(table, right=True)]
     if of_helium := helium_line_rows(history):
         body += ["", *aligned(of_helium, right=True)]
@@ -230,13 +227,17 @@ def _milestone_lines(history: History) -> list[str]:
 
 
 def _sample_lines(history: History) -> list[str]:
-    rows = sample_rows(history)
-    head = ("z", "x_e", "x_HI", "T_m (K)", "T_r (K)")
+    from ..history.samples import sample_rows
+
+    rows = sample_rows(history.redshift, _atom(history))
+    helium = helium_fraction_columns(history)
+    head = ("z", "x_e", "x_HI", *helium, "T_m (K)", "T_r (K)")
     body = [
         (
             f"{history.redshift[k]:.2f}",
             f"{history.free_electron_fraction[k]:.6e}",
             f"{history.neutral_hydrogen_fraction[k]:.6e}",
+            *(f"{column[k]:.6e}" for column in helium.values()),
             f"{history.matter_temperature_k[k]:.6g}",
             f"{history.radiation_temperature_k[k]:.6g}",
         )

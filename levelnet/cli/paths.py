@@ -22,7 +22,7 @@ def check_target(path: Path, force: bool, source: Path) -> None:
     """
     from ..store import check_output
 
-    if path.exists() and source.exists() and path.samefile(source):
+    if _same(path, source):
         raise InputError(f"{path}: is the file that is read; choose another output")
     check_output(path, force)
 
@@ -30,9 +30,30 @@ def check_target(path: Path, force: bool, source: Path) -> None:
 def check_folder(folder: Path) -> None:
     """Raise InputError if `folder` is no place for files; it may still have to be made."""
     place = folder.absolute()
-    while not place.exists():
-        place = place.parent
+    try:
+        while not _stands(place):
+            place = place.parent
+    except (OSError, ValueError) as error:  # ValueError: a null character
+        reason = (error.strerror if isinstance(error, OSError) else None) or str(error)
+        raise InputError(f"{folder}: cannot be made: {reason}") from None
     if not place.is_dir():
-        raise InputError(f"{folder}: cannot be made: {place} is a file, not a folder")
+        kind = "a file, not a" if place.is_file() else "no"
+        raise InputError(f"{folder}: cannot be made: {place} is {kind} folder")
     if not os.access(place, os.W_OK | os.X_OK):
         raise InputError(f"{folder}: no permission to write into folder {place}")
+
+
+def _same(path: Path, source: Path) -> bool:
+    try:
+        return path.samefile(source)
+    except (OSError, ValueError):  # one of them is missing, or no path at all: said by others
+        return False
+
+
+def _stands(place: Path) -> bool:
+    """Whether something has this name; a link that leads nowhere has."""
+    try:
+        place.lstat()
+    except (FileNotFoundError, NotADirectoryError):
+        return False
+    return True

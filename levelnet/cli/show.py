@@ -21,7 +21,7 @@ NAME = "show"
 SUMMARY = "sum up a result file; draw figures, write a table"
 DESCRIPTION = (
     "Print the summary of a result file, a table of effective rates, a history made from one or a "
-    "weighing or a study; write its figures or its table."
+    "weighing, a study or a sweep; write its figures or its table."
 )
 EXAMPLE = "levelnet show result.h5 --plot figures"
 
@@ -90,7 +90,9 @@ def _screens() -> dict[type, Callable[..., None]]:
     from ..history.result import History
     from ..studies.escape_records import EscapeStudy
     from ..studies.level_records import LevelStudy
+    from ..studies.sweep_record import Sweep
     from ..studies.weighing import Weighing
+    from .show_sweep import show_sweep
     from .show_table import show_distilled, show_escape, show_levels, show_table
     from .show_weighing import show_weighing
 
@@ -101,6 +103,7 @@ def _screens() -> dict[type, Callable[..., None]]:
         Weighing: show_weighing,
         LevelStudy: show_levels,
         EscapeStudy: show_escape,
+        Sweep: show_sweep,
     }
 
 

@@ -7,6 +7,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING
 
 from ..errors import InputError
+from ..studies.answers import level_answer
 from . import escape, levels
 from .console import Console
 from .distill import check_exports, write_exports
@@ -27,7 +28,7 @@ def show_levels(
     """Print the summary of a study and draw it where that was asked for."""
     _refuse_all(options, "a study of levels")
     written = levels.save_figures(study, folder, options.force, console)
-    found, met = levels.judged(study)
+    found, met = level_answer(study)
     print_result(
         options.json,
         lambda: level_values(study, found, met),

@@ -18,8 +18,9 @@ from .compare_rates import (
     without_overrides,
 )
 from .console import Console
-from .output import history_values, print_json, print_result, size_text, summary_text, time_text
+from .output import history_values, print_result, size_text, summary_text, time_text
 from .paths import check_target
+from .plan import add_plan, print_plan
 
 if TYPE_CHECKING:
     from ..history.result import History
@@ -47,9 +48,7 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
         help="result file (default: name of the setup with .h5, in the current folder)",
     )
     parser.add_argument("--force", action="store_true", help="overwrite the result file")
-    parser.add_argument(
-        "--dry-run", action="store_true", help="check the setup, estimate memory and time, stop"
-    )
+    add_plan(parser, "--dry-run")
     parser.add_argument(
         "--no-cache", action="store_true", help="neither read nor fill the cache of atomic rates"
     )
@@ -75,8 +74,10 @@ def run(options: argparse.Namespace, console: Console) -> int:
         setup = dataclasses.replace(setup, accuracy=accuracy)
     plain = without_overrides(setup) if options.compare_rates else None
     target = options.output or Path(f"{options.setup.stem}.h5")
-    if options.dry_run:
-        return _dry_run(setup, options.json)
+    if options.plan:
+        from ..studies.plans import plan_solve
+
+        return print_plan(plan_solve(setup), options.json)
     check_target(target, options.force, options.setup)
     history, seconds = compute(setup, console, cache=not options.no_cache)
     compared = None
@@ -142,27 +143,6 @@ def cache_pieces(console: Console) -> Any:
     except OSError as error:
         console.notice(f"no cache of atomic rates: {error.strerror or error}")
         return None
-
-
-def _dry_run(setup: Setup, as_json: bool) -> int:
-    from ..history.cost import check_memory, estimate
-
-    cost = estimate(setup)
-    check_memory(setup)
-    if as_json:
-        print_json(
-            {
-                "setup_digest": setup.digest,
-                "memory_bytes": cost.memory_bytes,
-                "seconds": cost.seconds,
-            }
-        )
-    else:
-        print(
-            f"setup {setup.digest} is valid; estimated: {time_text(cost.seconds)}, "
-            f"{size_text(cost.memory_bytes)} of memory"
-        )
-    return 0
 
 
 def finish(history: History, console: Console) -> int:

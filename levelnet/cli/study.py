@@ -6,13 +6,13 @@ import argparse
 from pathlib import Path
 from typing import TYPE_CHECKING
 
+from ..studies.answers import WITHIN
+from .plan import add_plan
+
 if TYPE_CHECKING:
     from ..history.setup import Setup
     from ..studies.helium_ladder import Atom
     from ..studies.requirement import Requirement
-
-WITHIN = 1e-3
-"""Relative error of x_e that a verdict allows where nothing else is asked."""
 
 
 def add_files(parser: argparse.ArgumentParser, ending: str) -> None:
@@ -55,6 +55,7 @@ def add_question(parser: argparse.ArgumentParser, candidate: str) -> None:
 
 def add_running(parser: argparse.ArgumentParser, runs: str) -> None:
     """Declare how the work is done and where figures go; `runs` is what processes share."""
+    add_plan(parser)
     parser.add_argument("--plot", metavar="FOLDER", type=Path, help="write figures into FOLDER")
     parser.add_argument(
         "--workers",

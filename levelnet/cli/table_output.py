@@ -153,7 +153,7 @@ def distilled_values(history: FastHistory, setup: Setup | None) -> dict[str, Any
 
 def distilled_summary(history: FastHistory) -> str:
     """Return the summary of a history made from a table as lines of plain text."""
-    from .output import nearest_rows
+    from ..history.samples import sample_rows
 
     seen = history.observables
     lines = [row("outcome", history.outcome.value)]
@@ -176,7 +176,7 @@ def distilled_summary(history: FastHistory) -> str:
             f"{history.matter_temperature_k[k]:.6g}",
             f"{history.radiation_temperature_k[k]:.6g}",
         )
-        for k in nearest_rows(history.redshift)
+        for k in sample_rows(history.redshift, "hydrogen" if history.helium is None else "both")
     ]
     steps = (
         f"{history.n_steps} steps ({history.n_rejected} rejected), from Saha equilibrium at z = "

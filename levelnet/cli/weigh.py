@@ -12,6 +12,7 @@ from ..quantities import known_targets
 from .console import Console
 from .output import print_result
 from .paths import check_folder, check_target
+from .plan import add_plan, print_plan
 from .solve import announce_cost, cache_pieces
 from .weigh_text import weighing_summary
 from .weigh_values import weighing_values
@@ -74,6 +75,7 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
     parser.add_argument(
         "--plot", metavar="FOLDER", type=Path, help="write figures (SVG and PDF) into FOLDER"
     )
+    add_plan(parser)
     parser.add_argument("--force", action="store_true", help="overwrite file and figures")
     parser.add_argument(
         "--no-cache", action="store_true", help="neither read nor fill the cache of atomic rates"
@@ -90,6 +92,11 @@ def run(options: argparse.Namespace, console: Console) -> int:
     targets = tuple(dict.fromkeys(asked))
     band = tuple(band_targets(setup, _band(options)))
     _check_places(options, targets, (*targets, *band), setup.helium_recombines)
+    if options.plan:
+        from ..studies.plans import plan_weigh
+
+        further = len(set(band) - set(targets))
+        return print_plan(plan_weigh(setup, len(targets), further), options.json)
     start = time.monotonic()
     weighing = _weighed(setup, targets, band, options, console)
     seconds = time.monotonic() - start
@@ -127,7 +134,7 @@ def _check_places(
 ) -> None:
     """Refuse what cannot be written before any work starts."""
     if options.output is not None:
-        check_target(options.output, options.force, options.setup)
+        check_target(options.output, options.force or options.plan, options.setup)
     if options.plot is not None:
         from ..report.figures import check_free
         from ..report.weights import figure_paths

@@ -20,9 +20,17 @@ from ..network.scaled import scaled_levels
 from ..network.tabulation import TabulatedReduction, node_count
 from ..numerics.chebyshev import ChebyshevSeries, chebyshev_nodes
 from ..pieces import Pieces
+from .certificate import RADIATION_POINTS
 from .certificate import certify as certify_table
 from .helium_build import distill_helium
-from .kept import check_helium_setup, check_lines, check_no_field, check_overrides, choose_kept
+from .kept import (
+    KeptChoice,
+    check_helium_setup,
+    check_lines,
+    check_no_field,
+    check_overrides,
+    choose_kept,
+)
 from .nodes import Atom, NodeSource, outline
 from .patches import Patches, Ranges, fit_patches
 from .plasma import HOTTEST_K
@@ -99,18 +107,12 @@ def distill(  # noqa: PLR0913  choices by name, each with a default
     SolveError
         If the tolerance is out of reach, or a worker process dies again and again on one input.
     """
-    choice = choose_kept(setup, kept)
+    choice = check_distillable(setup, kept, tolerance)
     if radiation_range_k is None:
-        radiation_range_k = _COLD_K, HOTTEST_K if setup.helium_recombines else _HOT_K
+        radiation_range_k = default_range_k(setup)
     ranges = _ranges(radiation_range_k, ratio_range)
-    if not TIGHTEST <= tolerance <= LOOSEST:
-        raise InputError(f"tolerance = {tolerance:g}: allowed are {TIGHTEST:g} to {LOOSEST:g}")
     check_memory(setup, workers)
     tell = progress or (lambda stage, fraction: None)
-    check_overrides(setup)
-    check_lines(setup.lines)
-    check_no_field(setup)
-    check_helium_setup(setup)
     atom = Atom.of(setup.hydrogen, choice, setup.rates.network)
     tell("atomic data", 0.0)
     with threadpool_limits(limits=1, user_api="blas"):
@@ -135,6 +137,31 @@ def distill(  # noqa: PLR0913  choices by name, each with a default
             table = dataclasses.replace(table, certificate=certificate)
     tell("done", 1.0)
     return table
+
+
+def check_distillable(
+    setup: Setup, kept: Iterable[tuple[int, int]] | None, tolerance: float
+) -> KeptChoice:
+    """The levels that a table keeps; InputError for a setup or tolerance that makes no table."""
+    choice = choose_kept(setup, kept)
+    if not TIGHTEST <= tolerance <= LOOSEST:
+        raise InputError(f"tolerance = {tolerance:g}: allowed are {TIGHTEST:g} to {LOOSEST:g}")
+    check_overrides(setup)
+    check_lines(setup.lines)
+    check_no_field(setup)
+    check_helium_setup(setup)
+    return choice
+
+
+def default_range_k(setup: Setup) -> tuple[float, float]:
+    """Range of T_r that a table has where none is asked for, in K."""
+    return _COLD_K, HOTTEST_K if setup.helium_recombines else _HOT_K
+
+
+def expected_reductions(setup: Setup, tolerance: float, certify: bool = True) -> int:
+    """How often :func:`distill` is going to reduce hydrogen, if no series needs refining."""
+    series = node_count(*default_range_k(setup), _SERIES * tolerance) + len(_CHECKS)
+    return 2 * series + RADIATION_POINTS if certify else series
 
 
 class _Counter:

@@ -34,7 +34,7 @@ from .table import COLLISIONS_K, EffectiveTable
 Progress = Callable[[str, float], None]
 
 SEED = 20_260_101
-_RADIATION_POINTS, _MATTER_POINTS = 32, 16
+RADIATION_POINTS, _MATTER_POINTS = 32, 16
 FIRST_REDSHIFT, LAST_REDSHIFT, HELIUM_REDSHIFT = 1600.0, 20.0, 8000.0
 _REDSHIFTS = 80
 # Both histories are stepped better than a table of the default tolerance errs; with helium, whose
@@ -195,11 +195,11 @@ def rate_errors(
         Table less exact reduction.
     """
     random = np.random.default_rng(seed)
-    x = random.uniform(table.log_low, table.log_high, _RADIATION_POINTS)
+    x = random.uniform(table.log_low, table.log_high, RADIATION_POINTS)
     highest = np.minimum(
         table.ratio_high, np.maximum(math.log(COLLISIONS_K) - x, 0.0)
     )  # measured constants: the series know no others
-    share = random.uniform(0.0, 1.0, (_MATTER_POINTS, _RADIATION_POINTS))
+    share = random.uniform(0.0, 1.0, (_MATTER_POINTS, RADIATION_POINTS))
     radiation_k = np.exp(x)
     matter_k = radiation_k * np.exp(table.ratio_low + share * (highest - table.ratio_low))
     nodes = source.at(radiation_k)

@@ -3,13 +3,19 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
 from ..arrays import FloatArray, frozen_array
 from ..errors import Outcome
 from ..history.result import RadiationField
+from ..history.samples import sample_rows
+from ..markup import html_table
 from .observables import Observables
+
+if TYPE_CHECKING:
+    import xarray
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -132,6 +138,33 @@ class FastHistory:
             "radiation_temperature_k",
         ):
             frozen_array(self, name, (len(self.redshift),))
+
+    def to_xarray(self) -> xarray.Dataset:
+        """The arrays over redshift as an xarray Dataset (needs the xarray extra)."""
+        import xarray
+
+        names = (
+            "free_electron_fraction",
+            "ionized_hydrogen_fraction",
+            "neutral_hydrogen_fraction",
+            "matter_temperature_k",
+            "radiation_temperature_k",
+        )
+        arrays: dict[str, Any] = {name: ("redshift", getattr(self, name)) for name in names}
+        return xarray.Dataset(arrays, coords={"redshift": self.redshift})
+
+    def _repr_html_(self) -> str:
+        """Show a small table in a notebook."""
+        rows = (
+            (
+                f"{self.redshift[k]:.1f}",
+                f"{self.free_electron_fraction[k]:.6g}",
+                f"{self.matter_temperature_k[k]:.6g}",
+            )
+            for k in sample_rows(self.redshift, "hydrogen" if self.helium is None else "both")
+        )
+        caption = f"History from effective rates: {self.outcome.value}"
+        return html_table(caption, ("z", "x_e", "T_m (K)"), rows)
 
 
 def fractions(log_odds: FloatArray) -> tuple[FloatArray, FloatArray]:

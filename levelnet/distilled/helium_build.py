@@ -8,8 +8,9 @@ from typing import NamedTuple
 
 from ..escape.helium_lines import HeliumGroundLines
 from ..escape.helium_treatment import HeliumTreatment
-from ..history.helium import COLDEST_K, IonNetwork
+from ..history.helium import COLDEST_K
 from ..history.helium_atom import HeliumAtoms, build_helium
+from ..history.ion_network import HeliumIon
 from ..history.setup import Setup
 from ..network.helium import HeliumReduction
 from ..network.tabulation import TabulatedReduction
@@ -72,7 +73,7 @@ def distill_helium(
     return HeliumParts(stage, _ion(second, ranges, tolerances[1]), lines, atoms)
 
 
-def _ion(network: IonNetwork | None, ranges: Ranges, tolerance: float) -> StageTable | None:
+def _ion(network: HeliumIon | None, ranges: Ranges, tolerance: float) -> StageTable | None:
     if network is None:
         return None
     reduced = network.reduced

@@ -12,7 +12,7 @@ from __future__ import annotations
 import dataclasses
 import math
 from dataclasses import dataclass
-from typing import TYPE_CHECKING, NamedTuple
+from typing import TYPE_CHECKING, Any, NamedTuple
 
 import numpy as np
 from numpy.typing import ArrayLike
@@ -22,11 +22,14 @@ from ..atomic.detailed_balance import SahaCoefficients, saha_coefficients
 from ..atomic.physics import Physics, Scales, scales
 from ..errors import RangeError
 from ..history.setup import Setup
+from ..markup import html_table
 from ..network.reduced import KeptLevels, ReducedRates
 from ..network.scaled import scaled_levels, scaled_rates
 from .effective import NEVER, EffectiveRates
 
 if TYPE_CHECKING:
+    import xarray
+
     from .certificate import Certificate
     from .helium_escape import LineTable
     from .stage import StageTable
@@ -131,6 +134,38 @@ class EffectiveTable:
             frozen_array(self, name, (n_pairs,))
         if (self.helium is None) != (self.helium_lines is None):
             raise ValueError("helium and helium_lines: one is of no use without the other")
+
+    def to_xarray(self) -> xarray.Dataset:
+        """The coefficients as they stand in the file, over cells and powers (needs the extra)."""
+        import xarray
+
+        arrays: dict[str, Any] = {
+            "equilibrium": (("cell", "level", "power"), self.equilibrium),
+            "exchange": (("cell", "pair", "power"), self.exchange),
+            "departure": (
+                ("cell", "ratio_cell", "level", "power", "ratio_power"),
+                self.departure,
+            ),
+            "lower": ("pair", self.lower),
+            "upper": ("pair", self.upper),
+        }
+        levels = {name: ("level", getattr(self.kept, name)) for name in ("n", "l")}
+        return xarray.Dataset(arrays, coords=levels)
+
+    def _repr_html_(self) -> str:
+        """Show the range and the measured errors in a notebook."""
+        low, high = self.radiation_range_k
+        rows = [("T_r", f"{low:g} to {high:g} K"), ("tolerance", f"{self.tolerance:g}")]
+        proof = self.certificate
+        if proof is not None:
+            rows.append(("largest error of a logarithm", f"{proof.largest_rate_error:.1e}"))
+            errors = zip(proof.cosmologies, proof.largest_history_error.tolist(), strict=True)
+            rows += [
+                (f"error of x_e, {name}", f"{error:.1e}" if math.isfinite(error) else "not known")
+                for name, error in errors
+            ]
+        caption = f"Effective rates, hydrogen n_max = {self.setup.hydrogen.n_max}"
+        return html_table(caption, ("", ""), rows)
 
     @property
     def scales(self) -> Scales:

@@ -70,6 +70,9 @@ def log_red_side(
         return np.asarray(np.logaddexp(own + np.log(-np.expm1(-depth)), log_blue - depth))
 
 
+Knots = tuple[int, list[float], list[float]]
+
+
 @dataclass(slots=True, eq=False)
 class Past:
     """The red sides of all lines at every accepted step so far: what a run remembers.
@@ -116,23 +119,28 @@ class Past:
 
     def at(self, time: float, line: int) -> tuple[float, float]:
         """Of one line: the cubic through the four nearest remembered steps, and its slope."""
-        first, weights, rises = self.knots(time)
+        return self.sum(self.knots(time), line)
+
+    def sum(self, knots: Knots, line: int) -> tuple[float, float]:
+        """What `at` gives, from the knots of that time."""
+        first, weights, rises = knots
         value = slope = 0.0
         for k, (weight, rise) in enumerate(zip(weights, rises, strict=True)):
             red = float(self.red[first + k][line])
             value, slope = value + weight * red, slope + rise * red
         return value, slope
 
-    def knots(self, time: float) -> tuple[int, list[float], list[float]]:
+    def knots(self, time: float) -> Knots:
         """First of the four nearest remembered steps; what each counts in value and in slope."""
         first = min(max(0, bisect_right(self.time, time) - 2), max(0, len(self.time) - 4))
         knots = self.time[first : first + 4]
         weights, rises = [], []
         for k, knot in enumerate(knots):
             weight, rise = 1.0, 0.0
-            for other in (other for j, other in enumerate(knots) if j != k):
-                rise = (rise * (time - other) + weight) / (knot - other)
-                weight *= (time - other) / (knot - other)
+            for j, other in enumerate(knots):
+                if j != k:
+                    rise = (rise * (time - other) + weight) / (knot - other)
+                    weight *= (time - other) / (knot - other)
             weights.append(weight)
             rises.append(rise)
         return first, weights, rises

@@ -101,20 +101,12 @@ class HeliumContinuum(HeliumTreatment):
         per_log = continuum_depth(lines, neutral_hydrogen_cm3, conditions.hubble_rate_per_s)
         shape = self._shapes(lines, conditions)
         continuum = per_log * width
-        found = [
-            self._chance(*one, shape.damping_slopes[:, k], shape.incoherent_slopes[:, k])
-            for k, one in enumerate(
-                zip(
-                    optical_depth.tolist(),
-                    continuum.tolist(),
-                    shape.damping.tolist(),
-                    shape.incoherent.tolist(),
-                    strict=True,
-                )
-            )
-        ]
-        chances = np.array(found).reshape(-1, 6).T
-        value, by_depth, by_continuum, by_shape, by_ground, by_others = chances
+        columns = np.stack([optical_depth, continuum, shape.damping, shape.incoherent], axis=1)
+        found = np.array([self._chance(*one) for one in columns.tolist()]).reshape(-1, 5).T
+        value, by_depth, by_continuum, by_damping, by_incoherent = found
+        by_shape, by_ground, by_others = (
+            by_damping * shape.damping_slopes + by_incoherent * shape.incoherent_slopes
+        )
         validity = {
             "continuum_depth": continuum,
             "damping": shape.damping,
@@ -132,18 +124,15 @@ class HeliumContinuum(HeliumTreatment):
         continuum: float,
         damping: float,
         incoherent: float,
-        damping_slopes: FloatArray,
-        incoherent_slopes: FloatArray,
     ) -> tuple[float, ...]:
-        """P of one line, its derivatives by ln tau and ln c, and those through the shape."""
+        """P of one line, its derivatives by ln tau and ln c, by damping and incoherent fraction."""
         natural = damping / incoherent
         if not self.diffusion or depth * incoherent < _THICK or natural > LARGEST_DAMPING:
             plain = continuum_escape(depth, continuum, damping)
-            return (*plain[:3], *(plain.by_damping * damping_slopes).tolist())
+            return (*plain, 0.0)
         moved, by_incoherent = diffusive_escape(depth, continuum, natural, incoherent)
-        natural_slopes = (damping_slopes - natural * incoherent_slopes) / incoherent
-        by_shape = moved.by_damping * natural_slopes + by_incoherent * incoherent_slopes
-        return (*moved[:3], *by_shape.tolist())
+        by_damping = moved.by_damping / incoherent
+        return (*moved[:3], by_damping, by_incoherent - by_damping * natural)
 
     def _shapes(self, lines: HeliumGroundLines, conditions: Conditions) -> _Shapes:
         radiation_k = conditions.radiation_temperature_k

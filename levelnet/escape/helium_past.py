@@ -100,10 +100,11 @@ class HeliumPast:
             then = time - delay
             if above < 0 or not self.red.time or then <= self.red.time[0]:
                 continue
-            value[line], slope[line] = self.red.at(then, above)
+            knots = self.red.knots(then)  # both remember at the same times
+            value[line], slope[line] = self.red.sum(knots, above)
             by_sent[line] = 1.0
             if continuum is not None:
-                past = self.continuum.at(then, above)
+                past = self.continuum.sum(knots, above)
                 now = math.log(max(float(continuum[line]), 1e-300)), -3.0 - hubble_slope
                 sent = value[line], slope[line]
                 left = attenuated(delay, past, now, sent)

@@ -48,8 +48,11 @@ class Cost:
     seconds: float
 
 
-def estimate(setup: Setup) -> Cost:
+def estimate(setup: Setup, populations: int | None = None, reduced: bool = False) -> Cost:
     """Estimate memory and time of a run from its sizes.
+
+    `populations` is the number of redshifts at which every level is solved for, all outputs by
+    default; `reduced` says that the reduced network is there already.
 
     Three cubes of n_max^3/3 numbers (line strengths, couplings, factors), the cross sections, and
     the populations at every output redshift. With whole shells, the strengths of every line are
@@ -66,32 +69,40 @@ def estimate(setup: Setup) -> Cost:
     cubes += _BORDERS * 8.0 * border
     # Of He I and He II: both spins, and half as many.
     helium = 1.5 * setup.helium.n_max**2 * setup.helium_recombines
-    populations = 5 * 8.0 * n_out * (top**2 / 2.0 + n - top + helium)
-    more_bytes, more_s = _of_helium(setup, n_out)
-    memory = cubes + 400.0 * n**2 + populations + more_bytes + _RESERVE_BYTES
+    solved = n_out if populations is None else populations
+    levels = 5 * 8.0 * solved * (top**2 / 2.0 + n - top + helium)
+    more_bytes, more_s = _of_helium(setup, solved, reduced)
+    memory = cubes + 400.0 * n**2 + levels + more_bytes + _RESERVE_BYTES
     low = setup.cosmology.cmb_temperature_k * (1.0 + setup.grid.redshift_end)
-    nodes = node_count(low, 6000.0, table_tolerance(setup)) + 7 if setup.accuracy.interpolate else 0
-    node = 7.0 / 12.0 * top**4 / _FLOP_PER_S + 3.0 * top**3 / 1e9 + _SECONDS_PER_BLOCK * top
-    node += _border_seconds(top, n - top)
+    tabulated = setup.accuracy.interpolate and not reduced
+    nodes = node_count(low, 6000.0, table_tolerance(setup)) + 7 if tabulated else 0
+    node = node_seconds(setup)
     evaluation = _SECONDS_PER_EVALUATION if setup.accuracy.interpolate else 5.0 * node
-    seconds = (nodes + n_out) * node + _EVALUATIONS * evaluation + 1e-8 * n**3
+    seconds = (nodes + solved) * node + _EVALUATIONS * evaluation + 1e-8 * n**3
     return Cost(memory, seconds + more_s + _field_seconds(setup))
 
 
-def _of_helium(setup: Setup, n_out: int) -> tuple[float, float]:
+def _of_helium(setup: Setup, solved: int, reduced: bool) -> tuple[float, float]:
     """Bytes and seconds that helium adds, populations apart; nothing where it is inert."""
     if not setup.helium_recombines:
         return 0.0, 0.0
     n = float(setup.helium.n_max)
     # Strengths, rates and factors of two spins, and of He II.
     memory = 8.0 * 4.0 * 3.0 * n**3 / 3.0 + _HELIUM_BYTES * n**2
-    nodes = node_count(*_HELIUM_RANGE_K, table_tolerance(setup)) + 7
+    nodes = 0 if reduced else node_count(*_HELIUM_RANGE_K, table_tolerance(setup)) + 7
     node = _HELIUM_NODE_S + _HELIUM_PER_CUBE_S * n**3
     if setup.helium.helium_ion == "network":
         node += 7.0 / 12.0 * n**4 / _FLOP_PER_S + _SECONDS_PER_BLOCK * n
     absorbs = setup.lines.helium == "continuum"
     evaluation = _CONTINUUM_EVALUATION_S if absorbs else _HELIUM_EVALUATION_S
-    return memory, _HELIUM_ATOM_S + (nodes + n_out) * node + _EVALUATIONS * evaluation
+    return memory, _HELIUM_ATOM_S + (nodes + solved) * node + _EVALUATIONS * evaluation
+
+
+def node_seconds(setup: Setup) -> float:
+    """Estimate the time of one reduction, or of the populations at one redshift, in s."""
+    n, top = setup.hydrogen.n_max, setup.hydrogen.highest_resolved
+    node = 7.0 / 12.0 * top**4 / _FLOP_PER_S + 3.0 * top**3 / 1e9 + _SECONDS_PER_BLOCK * top
+    return node + _border_seconds(top, n - top)
 
 
 def _field_seconds(setup: Setup) -> float:
@@ -114,22 +125,39 @@ def table_tolerance(setup: Setup) -> float:
     return max(0.01 * setup.accuracy.relative, 1e-11)
 
 
-def check_memory(setup: Setup, copies: int = 1, more_bytes: float = 0.0) -> Cost:
+def check_memory(
+    setup: Setup, copies: int = 1, more_bytes: float = 0.0, populations: int | None = None
+) -> Cost:
     """Estimate the cost; InputError with the figure if it cannot fit or n_max is out of range.
 
     With `copies` worker processes, each of which holds an atom of its own, all must fit at once;
-    `more_bytes` is what else the caller will hold.
+    `more_bytes` is what else the caller will hold, `populations` as for :func:`estimate`.
     """
     if copies < 1:
         raise InputError(f"workers = {copies}: at least 1 is needed")
-    cost = estimate(setup)
+    cost = estimate(setup, populations)
     cost = Cost(cost.memory_bytes + more_bytes, cost.seconds)
+    check_fits(setup, copies * cost.memory_bytes, copies)
+    return cost
+
+
+def check_fits(setup: Setup, needed_bytes: float, workers: int = 1) -> None:
+    """Raise InputError, with the figure, if so much memory is not there or n_max is too high.
+
+    Parameters
+    ----------
+    setup : Setup
+        That of the largest atom.
+    needed_bytes : float, bytes
+        What all worker processes take together.
+    workers : int
+        How many these are.
+    """
     available = available_memory_bytes()
     n = setup.hydrogen.n_max
-    needed = copies * cost.memory_bytes
-    workers = f" by {copies} workers" if copies > 1 else ""
-    figure = f"about {_readable(needed)} of memory needed{workers}"
-    if needed > available:
+    by = f" by {workers} workers" if workers > 1 else ""
+    figure = f"about {_readable(needed_bytes)} of memory needed{by}"
+    if needed_bytes > available:
         asked = f"hydrogen.n_max = {n}"
         if setup.helium_recombines:
             asked += f", helium.n_max = {setup.helium.n_max}"
@@ -139,7 +167,6 @@ def check_memory(setup: Setup, copies: int = 1, more_bytes: float = 0.0) -> Cost
             f"hydrogen.n_max = {n}: {figure}; the highest allowed is {HIGHEST_N}, "
             "up to which rates are tested"
         )
-    return cost
 
 
 def available_memory_bytes() -> float:

@@ -35,8 +35,10 @@ from ..network.coupling import GroundCoupling, with_line_factors
 from ..network.gradient import FlowGradient, FlowSlopes, flow_slopes, net_flow_gradient
 from ..network.reduced import Reduced
 from ..network.solve import solve_kept
-from .helium import Around, HeliumEquations
+from ..numerics.stepping import Slopes
+from .helium import HeliumEquations
 from .helium import Rates as HeliumRates
+from .ion_network import Around
 from .local import Local
 
 # No variable is ever so large: fractions would leave the doubles.
@@ -294,6 +296,11 @@ class SlowEquations:
         """Derivatives of the rates by the state, shape (n, n), and by s, shape (n,)."""
         here = self.linearized(log_scale, state)
         return here.matrix, here.drift
+
+    def slopes(self, log_scale: float, state: FloatArray) -> Slopes:
+        """The rates with the derivatives of `jacobian`."""
+        here = self.linearized(log_scale, state)
+        return Slopes(here.rate, here.matrix, here.drift)
 
     def linearized(self, log_scale: float, state: FloatArray) -> Linearized:
         """Rates, their slopes, and what the net flow hangs on, at one time and state."""

@@ -17,7 +17,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass, replace
-from typing import Any, NamedTuple
+from typing import NamedTuple
 
 import numpy as np
 
@@ -25,18 +25,11 @@ from .. import constants as const
 from ..arrays import FloatArray
 from ..atomic.detailed_balance import log_saha_factor
 from ..atomic.physics import UNCHANGED, Scales
-from ..background.conditions import Conditions
 from ..escape.blue_side import log_red_side
 from ..escape.helium_continuum import continuum_depth
 from ..escape.helium_past import HeliumPast
-from ..escape.helium_shares import with_factors
-from ..escape.helium_treatment import HeliumTreatment, Seen
-from ..escape.treatment import LineTreatment, ResonanceLines
-from ..network.coupling import GroundCoupling, with_decay, with_line_factors
-from ..network.gradient import FlowGradient, flow_slopes, net_flow_gradient
-from ..network.reduced import Reduced
-from ..network.solve import log_boltzmann_populations, solve_kept
-from ..numerics.chebyshev import ChebyshevSeries
+from ..escape.helium_treatment import Seen
+from .ion_network import Around, Flow, HeliumIon, NeutralHelium
 from .local import Local
 
 COLDEST_K = 1400.0
@@ -50,35 +43,6 @@ _RARE, _SLACK = math.log(1e-9), math.log(1e3)
 # From so far above COLDEST_K, in ln T_r, rates fade to nothing.
 EBB = 0.05
 ION_WEIGHT = 2.0  # of He+ in its ground state
-
-
-class Around(NamedTuple):
-    """What helium needs to know of its surroundings.
-
-    Attributes
-    ----------
-    radiation_temperature_k, matter_temperature_k : float, K
-        T_r and T_m.
-    helium_density_cm3, hubble_rate_per_s : float
-        n_He and H.
-    electrons_per_helium : float
-        n_e/n_He.
-    hubble_slope : float
-        d ln H/d ln a.
-    neutral_hydrogen_cm3 : float, cm^-3
-        n_HI; of no account to Saha equilibrium.
-    log_scale : float
-        ln a, to which the run's memory of the lines is referred.
-    """
-
-    radiation_temperature_k: float
-    matter_temperature_k: float
-    helium_density_cm3: float
-    hubble_rate_per_s: float
-    electrons_per_helium: float
-    hubble_slope: float
-    neutral_hydrogen_cm3: float = 0.0
-    log_scale: float = 0.0
 
 
 class HeliumFractions(NamedTuple):
@@ -112,30 +76,6 @@ class HeliumFractions(NamedTuple):
         return np.array([self.neutral * self.electrons, mixed])
 
 
-class Flow(NamedTuple):
-    """Net recombinations per nucleus and second, with their derivatives.
-
-    Attributes
-    ----------
-    value : float, s^-1
-        F.
-    by_electrons, by_ion, by_ground, by_matter : float, s^-1
-        By ln of n_e, of both fractions, and of T_m.
-    by_time : float, s^-1
-        By ln a with the state held, less F d ln H/d ln a, which the prefactor 1/H takes.
-    by_neutral_hydrogen : float, s^-1
-        By ln n_HI.
-    """
-
-    value: float
-    by_electrons: float
-    by_ion: float
-    by_ground: float
-    by_matter: float
-    by_time: float
-    by_neutral_hydrogen: float
-
-
 class Rates(NamedTuple):
     """(da/ds, db/ds) and their derivatives; shapes (2,), (2, 2), (2,), (2,), (2,), (2,).
 
@@ -158,139 +98,14 @@ class Rates(NamedTuple):
 
 
 @dataclass(frozen=True, slots=True, eq=False)
-class IonNetwork:
-    """The levels of one ion stage and how they reach its ground state.
-
-    Attributes
-    ----------
-    reduced : Reduced
-        Its interior.
-    lines : ResonanceLines
-        Lines to the ground state.
-    treatment : LineTreatment, or HeliumTreatment for He I
-        How their photons escape.
-    decay : int
-        Position of the kept level that decays by two photons.
-    decay_rate_per_s : float, s^-1
-        Its spontaneous rate.
-    stimulation : ChebyshevSeries or None
-        Ln of the factor by which the blackbody speeds it up, over ln T_r; None: not at all.
-    escape_factor : ndarray, shape (n_lines,), dimensionless, or None
-        Overrides of the escape of each line; None: none.
-    """
-
-    reduced: Reduced
-    lines: ResonanceLines
-    treatment: LineTreatment | HeliumTreatment
-    decay: int
-    decay_rate_per_s: float
-    stimulation: ChebyshevSeries | None = None
-    escape_factor: FloatArray | None = None
-
-    def solve(self, conditions: Conditions, seen: Seen | None = None) -> Local:
-        """Kept levels at these conditions; densities and fractions are those of the element.
-
-        `seen` is for a HeliumTreatment alone.
-        """
-        kept = self.reduced.kept
-        rates = self.reduced.rates(
-            conditions.radiation_temperature_k, conditions.matter_temperature_k
-        )
-        coupling = self._coupling(conditions, seen)
-        return Local(conditions, rates, coupling, solve_kept(kept, rates, coupling, conditions))
-
-    def _coupling(self, conditions: Conditions, seen: Seen | None) -> GroundCoupling:
-        kept = self.reduced.kept
-        treatment: Any = self.treatment  # He I takes lines of its own, and what they see
-        if seen is None:
-            lines = treatment.couple(self.lines, kept, conditions)
-            if self.escape_factor is not None:
-                lines = with_line_factors(lines, self.lines.upper, self.escape_factor)
-        else:
-            found: Any = self.lines
-            lines = with_factors(treatment, found, kept, conditions, seen, self.escape_factor)
-        log_boltzmann = log_boltzmann_populations(
-            kept, conditions.radiation_temperature_k, conditions.ground_fraction
-        )
-        here = math.exp(float(log_boltzmann[self.decay]))
-        rate, slope = self.decay_at(conditions.radiation_temperature_k)
-        return with_decay(lines, self.decay, rate, slope, here)
-
-    def decay_at(self, radiation_temperature_k: float) -> tuple[float, float]:
-        """Rate of the two-photon decay at T_r, s^-1, and its d ln/d ln T_r."""
-        if self.stimulation is None:
-            return self.decay_rate_per_s, 0.0
-        value, slope = self.stimulation.evaluate(math.log(radiation_temperature_k))
-        return self.decay_rate_per_s * math.exp(float(value[0])), float(slope[0])
-
-    @staticmethod
-    def conditions(around: Around, ion: float, ground: float) -> Conditions:
-        """Give conditions of a stage with these fractions of ions and of ground states."""
-        return Conditions(
-            around.radiation_temperature_k,
-            around.matter_temperature_k,
-            around.helium_density_cm3,
-            around.hubble_rate_per_s,
-            around.electrons_per_helium,
-            ion,
-            ground,
-        )
-
-    def net_flow(
-        self, around: Around, ion: float, ground: float, seen: Seen | None = None
-    ) -> float:
-        """Net recombinations per nucleus and second."""
-        return self.solve(self.conditions(around, ion, ground), seen).solution.net_flow
-
-    def flow(self, around: Around, ion: float, ground: float, seen: Seen | None = None) -> Flow:
-        """Net recombinations and their derivatives."""
-        conditions = self.conditions(around, ion, ground)
-        here = self.solve(conditions, seen)
-        gradient = net_flow_gradient(here.rates, here.coupling, here.solution)
-        slopes = flow_slopes(self.reduced.kept, here.rates, here.coupling, conditions, gradient)
-        value = here.solution.net_flow
-        by_time = (
-            -slopes.ln_radiation_temperature
-            - slopes.ln_matter_temperature
-            - 3.0 * slopes.ln_hydrogen_density
-            + around.hubble_slope * (slopes.ln_hubble_rate - value)
-        )
-        by_continuum, by_excess, excess_by_time = _surroundings(here.coupling, gradient)
-        by_time += excess_by_time - (3.0 + around.hubble_slope) * by_continuum
-        return Flow(
-            value,
-            slopes.ln_electron_fraction,
-            slopes.ln_ionized_fraction,
-            slopes.ln_ground_fraction,
-            slopes.ln_matter_temperature,
-            by_time,
-            by_continuum + by_excess,
-        )
-
-
-def _surroundings(coupling: GroundCoupling, gradient: FlowGradient) -> tuple[float, float, float]:
-    """Of a flow: by ln(n_HI/H) inside lines; by ln n_HI between them; by ln a of their fields."""
-    inside, between, time = (
-        coupling.slope_continuum,
-        coupling.excess_by_continuum,
-        coupling.excess_by_time,
-    )
-    return (
-        0.0 if inside is None else float((gradient.loss * inside).sum()),
-        0.0 if between is None else float(gradient.excess @ between),
-        0.0 if time is None else float(gradient.excess @ time),
-    )
-
-
-@dataclass(frozen=True, slots=True, eq=False)
 class HeliumEquations:
     """The two ionizations of helium.
 
     Attributes
     ----------
-    first : IonNetwork
-        He I, with a HeliumTreatment.
-    second : IonNetwork or None
+    first : NeutralHelium
+        He I.
+    second : HeliumIon or None
         He II; None: Saha equilibrium.
     ionization_ev : tuple of float, eV
         Of He I and of He II, each from its ground state.
@@ -300,8 +115,8 @@ class HeliumEquations:
         What changed constants do to helium; all above holds it already.
     """
 
-    first: IonNetwork
-    second: IonNetwork | None
+    first: NeutralHelium
+    second: HeliumIon | None
     ionization_ev: tuple[float, float]
     past: HeliumPast | None = None
     scales: Scales = UNCHANGED
@@ -310,6 +125,10 @@ class HeliumEquations:
     def coldest_k(self) -> float:
         """T_r below which helium is held, K."""
         return COLDEST_K * self.scales.energy
+
+    def held(self, radiation_temperature_k: float) -> bool:
+        """Whether helium stands still at this T_r."""
+        return radiation_temperature_k < self.coldest_k
 
     @staticmethod
     def fractions(state: FloatArray) -> HeliumFractions:
@@ -323,7 +142,7 @@ class HeliumEquations:
     def rate(self, around: Around, state: FloatArray) -> FloatArray:
         """Rates of change at (a, b), shape (2,): those of `rates`, at half the price."""
         x = self.fractions(state)
-        full, _ = self._fading(around)
+        full, _ = self.fading(around)
         if full == 0.0:
             return np.zeros(2)
         seen = self.seen(around)
@@ -331,12 +150,23 @@ class HeliumEquations:
         by_first = -first / (around.hubble_rate_per_s * x.neutral * x.charged)
         return full * np.array([by_first, self._upper_rate(around, x, float(state[1]), first)])
 
-    def _fading(self, around: Around) -> tuple[float, float]:
-        """How much of the rates is left near `coldest_k`, and its slope by ln T_r times EBB."""
-        return ramp(math.log(around.radiation_temperature_k / self.coldest_k) / EBB)
+    def fading(self, around: Around) -> tuple[float, float]:
+        """How much of the rates is left near `coldest_k`, and its slope by ln T_r."""
+        left, slope = ramp(math.log(around.radiation_temperature_k / self.coldest_k) / EBB)
+        return left, slope / EBB
+
+    def part_of_levels(self, b: float) -> tuple[float, float]:
+        """Part that the levels of He II have in the rate of b, and its slope by b.
+
+        The rest has the pull to Saha equilibrium.
+        """
+        if self.second is None:
+            return 0.0, 0.0
+        part, slope = ramp((b - GONE) / (FADING - GONE))
+        return part, slope / (FADING - GONE)
 
     def _upper_rate(self, around: Around, x: HeliumFractions, b: float, first: float) -> float:
-        part, _ = ramp((b - GONE) / (FADING - GONE))
+        part, _ = self.part_of_levels(b)
         pulled = PULL * (self.saha_log_ratio(1, around) - b)
         if self.second is None or part == 0.0:
             return pulled
@@ -348,7 +178,7 @@ class HeliumEquations:
     def rates(self, around: Around, state: FloatArray) -> Rates:
         """Rates of change and derivatives at (a, b)."""
         x = self.fractions(state)
-        full, slope = self._fading(around)
+        full, slope = self.fading(around)
         if full == 0.0:
             return _stacked([0.0] * 7, [0.0] * 7)
         first = self.first.flow(around, x.single, x.neutral, self.seen(around))
@@ -358,13 +188,13 @@ class HeliumEquations:
         if full == 1.0:
             return found
         fading = Rates(*(full * part for part in found))
-        return fading._replace(by_time=fading.by_time - slope / EBB * found.rate)
+        return fading._replace(by_time=fading.by_time - slope * found.rate)
 
     def _upper_rates(
         self, around: Around, x: HeliumFractions, b: float, first: Flow
     ) -> list[float]:
         """Rate of b and its derivatives: by the levels of He II, or by Saha equilibrium."""
-        part, slope = ramp((b - GONE) / (FADING - GONE))
+        part, slope = self.part_of_levels(b)
         if self.second is None or part == 0.0:
             return self.saha_pull(around, b)
         levels = _second_rates(around, x, first, self.second.flow(around, x.double, x.single))
@@ -372,7 +202,7 @@ class HeliumEquations:
             return levels
         pulled = self.saha_pull(around, b)
         mixed = [part * n + (1.0 - part) * p for n, p in zip(levels, pulled, strict=True)]
-        mixed[2] += slope / (FADING - GONE) * (levels[0] - pulled[0])
+        mixed[2] += slope * (levels[0] - pulled[0])
         return mixed
 
     def seen(self, around: Around) -> Seen:
@@ -381,13 +211,13 @@ class HeliumEquations:
         if self.past is None:
             return Seen(hydrogen_cm3)
         depth = None
-        if isinstance(self.first.treatment, HeliumTreatment) and self.first.treatment.absorbs:
+        if self.first.treatment.absorbs:
             depth = continuum_depth(self.past.lines, hydrogen_cm3, around.hubble_rate_per_s)
         return Seen(hydrogen_cm3, self.past.blue_side(around.log_scale, around.hubble_slope, depth))
 
     def longest_step(self, radiation_temperature_k: float) -> float:
         """No step in ln a from here may be longer, while one line lights another."""
-        if self.past is None or radiation_temperature_k < self.coldest_k:
+        if self.past is None or self.held(radiation_temperature_k):
             return math.inf
         return self.past.longest_step
 
@@ -433,7 +263,7 @@ class HeliumEquations:
 
     def remember(self, around: Around, state: FloatArray) -> None:
         """Keep what an accepted step sends to lines below, until helium is held."""
-        if self.past is None or around.radiation_temperature_k < self.coldest_k:
+        if self.past is None or self.held(around.radiation_temperature_k):
             return
         depth = continuum_depth(
             self.past.lines, around.neutral_hydrogen_cm3, around.hubble_rate_per_s

@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 from collections.abc import Callable
 from dataclasses import dataclass, replace
+from typing import NamedTuple
 
 import numpy as np
 
@@ -38,7 +39,8 @@ from ..numerics.chebyshev import ChebyshevSeries, chebyshev_nodes
 from ..pieces import Pieces, code_digest, content_key
 from ..tables import list_tables
 from .cost import table_tolerance
-from .helium import COLDEST_K, HeliumEquations, IonNetwork
+from .helium import COLDEST_K, HeliumEquations
+from .ion_network import HeliumIon, NeutralHelium
 from .setup import Setup
 
 Tell = Callable[[str, float], None]
@@ -127,70 +129,86 @@ def build_helium(
     tolerance : float, optional
         Largest error in the ln of any rate; None: what the setup's accuracy asks for.
     """
-    treatment, factor = helium_treatment(setup), scales(setup.physics, charge=2)
+    factor = scales(setup.physics, charge=2)
     # Of the atom with the measured constants.
     hottest_k /= factor.energy
     top_k = max(_HOTTEST_K, 2.0 ** (math.ceil(4.0 * math.log2(hottest_k)) / 4.0))
-    tolerance = tolerance or table_tolerance(setup)
+    tables = _Tables(top_k, tolerance or table_tolerance(setup), pieces)
     tell("helium", 0.0)
+    ladders, first, nodes, error = _first(setup, tables, factor)
+    # Saha equilibrium of He III too asks the ion for its energy.
+    changed = setup.rates.network_of("He II")
+    ion = hydrogen_ladder(
+        setup.helium.n_max, setup.hydrogen.energies, ((2, 0), (2, 1)), None, changed, charge=2
+    )
+    second = None
+    if setup.helium.helium_ion == "network":
+        second, own_nodes, own_error = _second(setup, ion, tables, factor)
+        nodes, error = nodes + own_nodes, max(error, own_error)
+    tell("helium", 1.0)
+    energies = (
+        float(ladders.levels.ionization_energy_ev[0]) * factor.energy,
+        float(ion.levels.ionization_energy_ev[0]) * factor.energy,
+    )
+    past = HeliumPast.of(first.lines) if first.lines.fed else None
+    equations = HeliumEquations(first, second, energies, past, factor)
+    return HeliumAtoms(ladders, None if second is None else ion, equations, nodes, error)
+
+
+class _Tables(NamedTuple):
+    """How reductions are tabulated: up to which T_r, to which error in the ln, kept where."""
+
+    top_k: float
+    tolerance: float
+    pieces: Pieces | None
+
+
+def _first(
+    setup: Setup, tables: _Tables, factor: Scales
+) -> tuple[HeliumLadders, NeutralHelium, int, float]:
+    """He I: its terms, its network, reductions behind the table and the error of that."""
     changed = setup.rates.network_of("He I")
     terms = kept_terms(setup.helium.n_max, _higher(setup))
     ladders = helium_ladders(setup.helium.n_max, terms, overrides=changed)
-    keys = tuple(part for one in changed for part in one.key)
-    reduced = _table_of_first(ladders, top_k, tolerance, pieces, keys)
+    reduced = _table_of_first(ladders, tables, tuple(part for one in changed for part in one.key))
     decay = [(int(n), int(l), int(s)) for n, l, s in _terms(ladders.kept)].index((2, 0, 0))
     assert setup.helium.two_photon_rate_per_s is not None
-    lines = helium_lines_of(setup, ladders)
-    past = HeliumPast.of(lines) if lines.fed else None
     rate = setup.rates.two_photon_rate_per_s(setup.helium.two_photon_rate_per_s, "He I")
-    first = IonNetwork(
+    lines = helium_lines_of(setup, ladders)
+    network = NeutralHelium(
         with_scales(reduced, factor),
         lines,
-        treatment,
+        helium_treatment(setup),
         decay,
         rate * factor.two_photon_rate,
-        stimulation=_stimulation(setup, helium_two_photon_factor, top_k, factor),
+        stimulation=_stimulation(setup, helium_two_photon_factor, tables.top_k, factor),
         escape_factor=setup.rates.ground_line_factors(lines.names, "escape"),
     )
-    # Saha equilibrium of He III too asks the ion for its energy.
-    energies_of, changed = setup.hydrogen.energies, setup.rates.network_of("He II")
-    ion = hydrogen_ladder(
-        setup.helium.n_max, energies_of, ((2, 0), (2, 1)), None, changed, charge=2
-    )
-    first_ev, second_ev = (
-        float(one.ionization_energy_ev[0]) * factor.energy for one in (ladders.levels, ion.levels)
-    )
-    energies = first_ev, second_ev
-    nodes, error = len(reduced.series.coefficients), reduced.interpolation_error
-    if setup.helium.helium_ion == "saha":
-        tell("helium", 1.0)
-        return HeliumAtoms(
-            ladders, None, HeliumEquations(first, None, energies, past, factor), nodes, error
-        )
+    return ladders, network, len(reduced.series.coefficients), reduced.interpolation_error
+
+
+def _second(
+    setup: Setup, ion: Ladder, tables: _Tables, factor: Scales
+) -> tuple[HeliumIon, int, float]:
+    """He II: its network, reductions behind the table and the error of that."""
+    changed = setup.rates.network_of("He II")
     keys = tuple(part for one in changed for part in one.key)
-    table = _table_of_second(ion, top_k, tolerance, pieces, (energies_of, *keys))
-    tell("helium", 1.0)
+    table = _table_of_second(ion, tables, (setup.hydrogen.energies, *keys))
     gap_ev = float(ion.kept.energy_ev[0])
     rate = setup.rates.two_photon_rate_per_s(two_photon_rate(2), "He II")
     escape = setup.rates.ion_escape_factor()
-    second = IonNetwork(
+    network = HeliumIon(
         with_scales(table, factor),
         _line_of_second(ion, factor),
         Sobolev(),
         0,
         rate * factor.two_photon_rate,
         stimulation=_stimulation(
-            setup, lambda t: stimulated_two_photon_factor(t, gap_ev), top_k, factor
+            setup, lambda t: stimulated_two_photon_factor(t, gap_ev), tables.top_k, factor
         ),
         escape_factor=None if escape == 1.0 else np.array([escape]),
     )
-    return HeliumAtoms(
-        ladders,
-        ion,
-        HeliumEquations(first, second, energies, past, factor),
-        nodes + table.n_nodes,
-        max(error, table.interpolation_error),
-    )
+    return network, table.n_nodes, table.interpolation_error
 
 
 def _terms(kept: KeptLevels) -> list[tuple[int, int, int]]:
@@ -223,27 +241,18 @@ def _line_of_second(ion: Ladder, scale: Scales) -> ResonanceLines:
 
 
 def _table_of_first(
-    ladders: HeliumLadders,
-    top_k: float,
-    tolerance: float,
-    pieces: Pieces | None,
-    changed: tuple[object, ...],
+    ladders: HeliumLadders, how: _Tables, changed: tuple[object, ...]
 ) -> HeliumReduction:
     tables = [one.sha256 for one in list_tables() if one.name.startswith("helium/")]
     terms = [number for term in _terms(ladders.kept) for number in term]
     key = ("helium", code_digest(_CODE), *tables, ladders.levels.n_max, *terms, *changed)
-    return tabulate_helium(ladders, COLDEST_K, top_k, tolerance, recall_from(pieces, *key))
+    recall = recall_from(how.pieces, *key)
+    return tabulate_helium(ladders, COLDEST_K, how.top_k, how.tolerance, recall)
 
 
-def _table_of_second(
-    ion: Ladder,
-    top_k: float,
-    tolerance: float,
-    pieces: Pieces | None,
-    chosen: tuple[object, ...],
-) -> TabulatedReduction:
-    key = ("helium ion", code_digest(_CODE), ion.n_max, *chosen)
-    return tabulate(ion, COLDEST_K, top_k, tolerance, recall=recall_from(pieces, *key))
+def _table_of_second(ion: Ladder, how: _Tables, chosen: tuple[object, ...]) -> TabulatedReduction:
+    recall = recall_from(how.pieces, "helium ion", code_digest(_CODE), ion.n_max, *chosen)
+    return tabulate(ion, COLDEST_K, how.top_k, how.tolerance, recall=recall)
 
 
 def recall_from(pieces: Pieces | None, *depends_on: object) -> Recall | None:

@@ -8,13 +8,13 @@ fading where helium is held.
 
 from __future__ import annotations
 
-import math
 from typing import NamedTuple
 
 import numpy as np
 
 from ..arrays import FloatArray
-from .helium import COLDEST_K, EBB, FADING, GONE, Around, HeliumEquations, ramp
+from .helium import HeliumEquations
+from .ion_network import Around
 
 
 class Explicit(NamedTuple):
@@ -39,10 +39,8 @@ def explicit_rates(
 ) -> Explicit:
     """Derivatives at (a, b), given the net flows F_1 and F_2 there, shape (2,), in s^-1."""
     x, hubble = helium.fractions(state), around.hubble_rate_per_s
-    full, slope = ramp(math.log(around.radiation_temperature_k / COLDEST_K) / EBB)
-    levels = 0.0
-    if helium.second is not None:
-        levels, _ = ramp((float(state[1]) - GONE) / (FADING - GONE))
+    full, slope = helium.fading(around)
+    levels, _ = helium.part_of_levels(float(state[1]))
     # Of b the pull alone, without its levels.
     pull = np.array(helium.saha_pull(around, float(state[1]))) * (1.0 - levels)
     unhurried = np.array(
@@ -57,7 +55,7 @@ def explicit_rates(
     rate[1] += pull[0]
     return Explicit(
         full * by_flows,
-        np.array([0.0, full * pull[4]]) + slope / EBB * rate,
+        np.array([0.0, full * pull[4]]) + slope * rate,
         np.array([0.0, full * pull[3]]),
         -full * of_levels,
     )

@@ -22,6 +22,9 @@ from .helium_moment import HeliumMoment
 from .helium_record import HeliumLineFigures
 from .limits import LARGEST_X_E_ERROR, crossed_note
 
+# Share of He I above which its recombination has begun: near z = 2750.
+_BEGUN = 0.02
+
 
 def electron_errors(
     redshift: FloatArray, moments: Sequence[HeliumMoment], helium_ratio: float, flow: FloatArray
@@ -42,9 +45,12 @@ def electron_errors(
     Returns
     -------
     ndarray, shape (n_redshift, n_lines), dimensionless
-        NaN where `flow` is.
+        NaN where `flow` is, and everywhere if the outputs begin after He I has begun to recombine:
+        what it did before is not known.
     """
     x = [one.fractions for one in moments]
+    if x[0].neutral > _BEGUN:
+        return np.full_like(flow, np.nan)
     ratio = np.array([np.log(one.charged) - np.log(one.neutral) for one in x])
     k, s = np.array([one.settling_hubble for one in moments]), -np.log1p(redshift)
     moved = np.zeros_like(flow)
@@ -82,6 +88,11 @@ def helium_limit_notes(
         Warnings that name line, redshifts, figure, limit and what is left out.
     """
     notes = []
+    if np.isnan(figures.escape_error).all() and not np.isnan(figures.escape_change).all():
+        notes.append(
+            "what the lines of He I do to x_e is not estimated, and no limit of theirs judged: the "
+            "outputs begin after He I has begun to recombine; give some 50 from z = 3400 to 1600"
+        )
     for line, name in enumerate(figures.names):
         for figure, error, meaning in (
             ("escape_change", "escape_error", chosen.leaves_out),

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import math
-from dataclasses import replace
 
 import numpy as np
 from scipy.interpolate import CubicSpline
@@ -12,7 +11,7 @@ from ..arrays import FloatArray
 from ..network.assembly import Workspace, factor_interior
 from ..network.helium_populations import helium_populations
 from ..network.populations import LevelPopulations, populations
-from ..network.scaled import as_measured
+from ..network.scaled import as_measured, scaled_levels
 from .course import state_at
 from .equations import SlowEquations
 from .helium import HeliumEquations
@@ -47,7 +46,7 @@ def _moment(
     x, electrons = HeliumEquations.fractions(state[2:]), equations.electron_fraction(state)
     one, scales = atoms.equations.first, atoms.equations.scales
     conditions = as_measured(one.conditions(around, x.single, x.neutral), scales)
-    if around.radiation_temperature_k < atoms.equations.coldest_k:
+    if atoms.equations.held(around.radiation_temperature_k):
         held = [_ground_alone(len(atoms.first.levels), x.neutral)]
         if atoms.second is not None:
             held.append(_ground_alone(len(atoms.second.levels), x.single))
@@ -89,10 +88,10 @@ def helium_species(
     moments : list of HeliumMoment
         Helium at every output.
     """
-    unit = atoms.equations.scales.energy
-    named: list[tuple[str, Levels]] = [("He I", _scaled(atoms.first.levels, unit))]
+    scales = atoms.equations.scales
+    named: list[tuple[str, Levels]] = [("He I", scaled_levels(atoms.first.levels, scales))]
     if atoms.second is not None:
-        named.append((atoms.second.species, _scaled(atoms.second.levels, unit)))
+        named.append((atoms.second.species, scaled_levels(atoms.second.levels, scales)))
     made = []
     for k, (name, levels) in enumerate(named):
         log_population = np.array([one.levels[k].log_population for one in moments])
@@ -102,14 +101,6 @@ def helium_species(
         departure = np.array([one.levels[k].log_departure for one in moments])
         made.append(SpeciesPopulations(name, levels, population, departure))
     return tuple(made)
-
-
-def _scaled(levels: Levels, unit: float) -> Levels:
-    return replace(
-        levels,
-        energy_ev=levels.energy_ev * unit,
-        ionization_energy_ev=levels.ionization_energy_ev * unit,
-    )
 
 
 def helium_figures(
@@ -178,7 +169,7 @@ def _first_flow(
     """Net flow to the ground state of He I by channel, s^-1 per helium nucleus; 0 if held."""
     state = state_at(integrated, log_scale) if state is None else state
     around = integrated.equations.helium_around(log_scale, state)
-    if around.radiation_temperature_k < atoms.equations.coldest_k:
+    if atoms.equations.held(around.radiation_temperature_k):
         return np.zeros(len(atoms.first.kept_position))
     return atoms.equations.first_local(around, state[2:]).solution.flow
 

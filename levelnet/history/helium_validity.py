@@ -76,7 +76,7 @@ def helium_line_figures(
 def _figures(
     integrated: Integrated, atoms: HeliumAtoms, here: Local, redshift: float
 ) -> dict[str, FloatArray]:
-    helium, lines = atoms.equations, _lines(atoms)
+    helium, lines = atoms.equations, atoms.equations.first.lines
     log_scale = -math.log1p(redshift)
     state = state_at(integrated, log_scale)
     around = integrated.equations.helium_around(log_scale, state)
@@ -102,12 +102,6 @@ def _figures(
         "log_red_side": said["log_red_side"],
         "unseen_feedback": _unseen(integrated, atoms, here, log_scale, said),
     }
-
-
-def _lines(atoms: HeliumAtoms) -> HeliumGroundLines:
-    lines = atoms.equations.first.lines
-    assert isinstance(lines, HeliumGroundLines)
-    return lines
 
 
 def _part_of_level(lines: HeliumGroundLines, escape: FloatArray) -> FloatArray:
@@ -143,7 +137,7 @@ def _unseen(
     said: dict[str, FloatArray],
 ) -> FloatArray:
     """What lines above have sent and the treatment leaves out, over what drives each line."""
-    lines = _lines(atoms)
+    lines = atoms.equations.first.lines
     departure = here.solution.log_population - here.solution.log_boltzmann
     source, blue, found = departure[lines.upper], said["log_blue_side"], np.zeros(len(lines.names))
     # What comes is absorbed with the escape of Sobolev, what the line makes leaves with its own.
@@ -157,7 +151,7 @@ def _unseen(
 
 def _sent(integrated: Integrated, atoms: HeliumAtoms, line: int, log_scale: float) -> float:
     """Ln u of what the next line above sent, where hydrogen has taken its part on the way."""
-    lines, equations = _lines(atoms), integrated.equations
+    lines, equations = atoms.equations.first.lines, integrated.equations
     above = int(lines.next_above[line])
     delay = math.log(lines.energy_ev[above] / lines.energy_ev[line])
     if log_scale - delay <= -math.log1p(integrated.handover.redshift):

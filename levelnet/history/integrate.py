@@ -38,6 +38,8 @@ Progress = Callable[[str, float], None]
 # asked.
 # So does 0.5 for helium: x_HeII was measured to 0.5 of what is asked, and to 1.8 with 0.8.
 _LOCAL = 0.5
+# The logarithm of a rare ion may err by more, but by no more than this in a step.
+_LOOSEST = 1e-3
 # A march with a field, which takes equal steps, starts where the lag is so small; the reference
 # that tells it T_m is integrated to this accuracy.
 _FIELD_LAG, _REFERENCE = 1e-5, 1e-5
@@ -111,7 +113,6 @@ def integrate_history(
     helium = None if atoms is None else atoms.equations
     scout = _scout(setup, chosen, helium)
     handover = handover_of(setup, scout)
-    resolved = isinstance(chosen, ResolvedField)
     begin = handover_of_field(setup, scout) if resolved else handover
     if start_above > handover.redshift and not resolved:
         handover = replace(handover, redshift=start_above)
@@ -333,12 +334,13 @@ def integrate_slow(
     def local_error(reached: FloatArray) -> FloatArray:
         local = np.full(len(reached), _LOCAL * asked)
         if equations.helium is not None:
-            local[2:] *= equations.helium.slack(reached[2:])
+            rare = np.minimum(equations.helium.slack(reached[2:]) * local[2:], _LOOSEST)
+            local[2:] = np.maximum(local[2:], rare)
         return local
 
     return integrate(
         equations.rate,
-        equations.jacobian,
+        equations.slopes,
         start,
         state,
         outputs,

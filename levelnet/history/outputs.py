@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable
-from dataclasses import replace
+from functools import partial
 from typing import NamedTuple
 
 import numpy as np
@@ -12,10 +12,10 @@ from scipy.interpolate import CubicSpline
 
 from ..arrays import FloatArray
 from ..atomic.levels import level_name
+from ..background.conditions import Conditions
 from ..background.quadrature import quadrature
 from ..background.scattering import opacity_per_mpc
 from ..errors import SolveError
-from ..escape.helium_treatment import HeliumTreatment
 from ..network.assembly import (
     FactoredInterior,
     Workspace,
@@ -23,9 +23,10 @@ from ..network.assembly import (
     interior_photoionization,
 )
 from ..network.populations import LevelPopulations, populations
-from ..network.scaled import as_measured
+from ..network.scaled import as_measured, scaled_levels
 from ..network.tabulation import TabulatedReduction
 from ..numerics.stepping import Trajectory
+from ..pieces import Pieces
 from .course import electron_fraction_at, state_at
 from .equations import ionized_and_neutral
 from .helium_limits import helium_limit_notes
@@ -37,6 +38,7 @@ from .helium_outputs import (
     helium_species,
 )
 from .integrate import Integrated, Progress
+from .level_pieces import KeptLevels, LevelsAt
 from .limits import field_notes, limit_notes
 from .local import Local
 from .notes import notes_of
@@ -53,6 +55,7 @@ from .setup import Setup
 from .validity import Steps, line_figures, steps_of
 
 _SMALLEST_LOG = math.log(1e-300)
+_HELIUM = ("neutral", "singly_ionized", "doubly_ionized")
 
 
 class _Output(NamedTuple):
@@ -64,7 +67,9 @@ class _Output(NamedTuple):
     relaxation_hubble: float
 
 
-def assemble_history(setup: Setup, integrated: Integrated, tell: Progress) -> History:
+def assemble_history(
+    setup: Setup, integrated: Integrated, tell: Progress, pieces: Pieces | None = None
+) -> History:
     """Work out all that was asked from the slow variables, and what to know about it.
 
     Where the integration ended early the history ends there, with the outcome saying why.
@@ -75,18 +80,16 @@ def assemble_history(setup: Setup, integrated: Integrated, tell: Progress) -> Hi
     redshift = integrated.redshift[reached]
     if not len(redshift):
         raise SolveError(trajectory.outcome.value, outcome=trajectory.outcome)
-    outputs = _outputs(integrated, redshift, tell)
+    kept = KeptLevels(setup, len(redshift), pieces)
+    outputs = _outputs(integrated, redshift, kept, tell)
     moments = helium_moments(integrated, redshift)
     every = [one.relaxation_hubble for one in outputs]
     slowest = min([*every, *(one.relaxation_hubble for one in moments)], default=math.inf)
     outcome = outcome_of(setup, integrated, [slowest])
     conditions = [o.local.conditions for o in outputs]
-    electron_fraction = np.array([c.electron_fraction for c in conditions])
-    hydrogen_cm3 = np.array([c.hydrogen_density_cm3 for c in conditions])
-    depth, visibility, marks = _seen(integrated, redshift, hydrogen_cm3 * electron_fraction)
-    ionized = np.array([c.ionized_fraction for c in conditions])
-    ground = np.array([c.ground_fraction for c in conditions])
-    helium = _helium_fractions(moments, len(redshift))
+    arrays, marks = history_arrays(setup, integrated, redshift, conditions, moments)
+    electron_fraction = arrays["free_electron_fraction"]
+    ground = arrays["neutral_hydrogen_fraction"]
     steps = steps_of(integrated)
     figures = line_figures(
         integrated, steps, redshift, [o.local for o in outputs], [o.lost_per_s for o in outputs]
@@ -99,39 +102,68 @@ def assemble_history(setup: Setup, integrated: Integrated, tell: Progress) -> Hi
     figures_of_helium, atoms = None, integrated.helium
     if atoms is not None:
         species += helium_species(atoms, setup.cosmology.helium_ratio(), moments)
-        closure = closure_error(
-            integrated.equations, electron_fraction, np.array([ground, ionized]), helium
-        )
+        hydrogen = np.array([ground, arrays["ionized_hydrogen_fraction"]])
+        helium = np.array([arrays[f"{name}_helium_fraction"] for name in _HELIUM])
+        closure = closure_error(integrated.equations, electron_fraction, hydrogen, helium)
         figures_of_helium = helium_figures(integrated, atoms, moments, redshift, closure)
         treatment = atoms.equations.first.treatment
-        assert isinstance(treatment, HeliumTreatment)
         warnings += helium_limit_notes(redshift, figures_of_helium.lines, treatment)
     return History(
         setup,
         outcome,
         redshift,
-        electron_fraction,
-        ionized,
-        ground,
-        helium[0],
-        helium[1],
-        helium[2],
-        np.array([c.matter_temperature_k for c in conditions]),
-        np.array([c.radiation_temperature_k for c in conditions]),
-        hydrogen_cm3,
-        np.array([c.hubble_rate_per_s for c in conditions]),
-        setup.cosmology.cosmic_time_s(redshift),
-        depth,
-        visibility,
-        species,
-        channels(integrated, steps, redshift, np.array([o.local.solution.flow for o in outputs])),
-        figures,
-        marks,
-        _diagnostics(integrated, outputs, slowest),
-        notes_of(setup, chosen, warnings),
-        None if integrated.field is None else integrated.field.field,
-        figures_of_helium,
+        **arrays,
+        species=species,
+        channels=channels(
+            integrated, steps, redshift, np.array([o.local.solution.flow for o in outputs])
+        ),
+        lines=figures,
+        milestones=marks,
+        diagnostics=_diagnostics(integrated, outputs, slowest),
+        notes=notes_of(setup, chosen, warnings),
+        field=None if integrated.field is None else integrated.field.field,
+        helium=figures_of_helium,
     )
+
+
+def history_arrays(
+    setup: Setup,
+    integrated: Integrated,
+    redshift: FloatArray,
+    conditions: list[Conditions],
+    moments: list[HeliumMoment],
+) -> tuple[dict[str, FloatArray], Milestones]:
+    """All arrays of a history over redshift, by their names there, and its milestones.
+
+    Parameters
+    ----------
+    setup, integrated
+        The run.
+    redshift : ndarray, shape (n_redshift,), dimensionless
+        Outputs that were reached.
+    conditions : list of Conditions, length n_redshift
+        At these.
+    moments : list of HeliumMoment
+        Helium at these; empty where it is inert.
+    """
+    electron_fraction = np.array([c.electron_fraction for c in conditions])
+    hydrogen_cm3 = np.array([c.hydrogen_density_cm3 for c in conditions])
+    depth, visibility, marks = _seen(integrated, redshift, hydrogen_cm3 * electron_fraction)
+    helium = _helium_fractions(moments, len(redshift))
+    arrays = {
+        "free_electron_fraction": electron_fraction,
+        "ionized_hydrogen_fraction": np.array([c.ionized_fraction for c in conditions]),
+        "neutral_hydrogen_fraction": np.array([c.ground_fraction for c in conditions]),
+        **{f"{name}_helium_fraction": helium[k] for k, name in enumerate(_HELIUM)},
+        "matter_temperature_k": np.array([c.matter_temperature_k for c in conditions]),
+        "radiation_temperature_k": np.array([c.radiation_temperature_k for c in conditions]),
+        "hydrogen_density_cm3": hydrogen_cm3,
+        "hubble_rate_per_s": np.array([c.hubble_rate_per_s for c in conditions]),
+        "cosmic_time_s": np.asarray(setup.cosmology.cosmic_time_s(redshift)),
+        "optical_depth": depth,
+        "visibility": visibility,
+    }
+    return arrays, marks
 
 
 def _helium_fractions(moments: list[HeliumMoment], count: int) -> FloatArray:
@@ -141,26 +173,44 @@ def _helium_fractions(moments: list[HeliumMoment], count: int) -> FloatArray:
     return np.array([np.ones(count), np.zeros(count), np.zeros(count)])
 
 
-def _outputs(integrated: Integrated, redshift: FloatArray, tell: Progress) -> list[_Output]:
+def _outputs(
+    integrated: Integrated, redshift: FloatArray, kept: KeptLevels, tell: Progress
+) -> list[_Output]:
     work = Workspace.of(integrated.ladder)
     found = []
     for k, z in enumerate(redshift.tolist()):
-        local, factored, levels = solve_levels(integrated, z, work)
-        relaxation = relaxation_hubble(local)
-        found.append(_Output(local, levels, _lost_per_s(factored), relaxation))
+        local = local_at(integrated, z)
+        levels, lost_per_s = kept.at(z, partial(_levels_at, integrated, local, work))
+        found.append(_Output(local, levels, lost_per_s, relaxation_hubble(local)))
         tell("level populations", (k + 1) / len(redshift))
     return found
+
+
+def _levels_at(integrated: Integrated, local: Local, work: Workspace) -> LevelsAt:
+    factored, levels = _solved(integrated, local, work)
+    return LevelsAt(levels, _lost_per_s(factored))
+
+
+def local_at(integrated: Integrated, redshift: float) -> Local:
+    """Kept levels at one output redshift."""
+    log_scale = -math.log1p(redshift)
+    return integrated.equations.local(log_scale, state_at(integrated, log_scale))
 
 
 def solve_levels(
     integrated: Integrated, redshift: float, work: Workspace
 ) -> tuple[Local, FactoredInterior, LevelPopulations]:
     """Kept levels, factored interior and populations of every level at one output redshift."""
-    equations, log_scale = integrated.equations, -math.log1p(redshift)
-    local = equations.local(log_scale, state_at(integrated, log_scale))
-    measured = as_measured(local.conditions, equations.scales)
+    local = local_at(integrated, redshift)
+    return local, *_solved(integrated, local, work)
+
+
+def _solved(
+    integrated: Integrated, local: Local, work: Workspace
+) -> tuple[FactoredInterior, LevelPopulations]:
+    measured = as_measured(local.conditions, integrated.equations.scales)
     factored = factor_interior(integrated.ladder, measured.radiation_temperature_k, work)
-    return local, factored, populations(factored, local.solution.log_population, measured)
+    return factored, populations(factored, local.solution.log_population, measured)
 
 
 def _seen(
@@ -184,12 +234,8 @@ def _species(integrated: Integrated, outputs: list[_Output]) -> SpeciesPopulatio
     log_population = np.array([o.levels.log_population for o in outputs])
     population = np.where(log_population < _SMALLEST_LOG, 0.0, np.exp(log_population))
     log_departure = np.array([o.levels.log_departure for o in outputs])
-    ladder, unit = integrated.ladder, integrated.equations.scales.energy
-    levels = replace(
-        ladder.levels,
-        energy_ev=ladder.levels.energy_ev * unit,
-        ionization_energy_ev=ladder.levels.ionization_energy_ev * unit,
-    )
+    ladder = integrated.ladder
+    levels = scaled_levels(ladder.levels, integrated.equations.scales)
     return SpeciesPopulations(ladder.species, levels, population, log_departure)
 
 

@@ -11,8 +11,10 @@ from ..arrays import FloatArray, frozen_array
 from ..atomic.helium_levels import HeliumLevels
 from ..atomic.levels import LevelSet
 from ..errors import InputError, Outcome, SolveError
+from ..markup import html_table
 from .helium_record import HeliumFigures
 from .line_figures import LineFigures
+from .samples import sample_rows
 from .setup import Setup
 
 if TYPE_CHECKING:
@@ -340,18 +342,12 @@ class History:
 
     def _repr_html_(self) -> str:
         """Show a small table in a notebook."""
-        rows = "".join(
-            f"<tr><td>{z:.1f}</td><td>{x:.6g}</td><td>{t:.6g}</td></tr>"
-            for z, x, t in zip(
-                self.redshift[:: max(1, len(self.redshift) // 10)],
-                self.free_electron_fraction[:: max(1, len(self.redshift) // 10)],
-                self.matter_temperature_k[:: max(1, len(self.redshift) // 10)],
-                strict=True,
+        rows = (
+            (
+                f"{self.redshift[k]:.1f}",
+                f"{self.free_electron_fraction[k]:.6g}",
+                f"{self.matter_temperature_k[k]:.6g}",
             )
+            for k in sample_rows(self.redshift, "hydrogen" if self.helium is None else "both")
         )
-        from html import escape
-
-        return (
-            f"<table><caption>{escape(repr(self))}</caption>"
-            f"<tr><th>z</th><th>x_e</th><th>T_m (K)</th></tr>{rows}</table>"
-        )
+        return html_table(repr(self)[1:-1], ("z", "x_e", "T_m (K)"), rows)

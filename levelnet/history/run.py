@@ -33,7 +33,8 @@ def solve(
         ``progress(stage, fraction)``, called now and then with 0 <= fraction <= 1.
     pieces : Pieces, optional
         Store of reduced networks, such as ``levelnet.pieces.FolderPieces(folder)``; a repeated run
-        with the same atom then skips the reduction.
+        with the same atom then skips the reduction. Populations that take long are kept there too,
+        output by output: a run that was killed goes on, to the same bits.
     line_treatment : LineTreatment, optional
         A treatment of the resonance lines of your own, in place of the one the setup names.
     strict : bool
@@ -68,7 +69,7 @@ def solve(
     check_memory(setup)
     with one_blas_thread():
         integrated = integrate_history(setup, tell, pieces, line_treatment)
-        history = assemble_history(setup, integrated, tell)
+        history = assemble_history(setup, integrated, tell, pieces)
     if strict:
         history.require_converged()
     elif not history.outcome.ok:

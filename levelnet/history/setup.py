@@ -26,6 +26,7 @@ from ..escape.frequency_step import (
     highest_line,
 )
 from ..escape.lines import HIGHEST_FED, Lines
+from ..markup import html_text
 from ..records import build, checked_record, from_mapping
 from ..texts import read_text
 
@@ -264,14 +265,6 @@ class Setup:
         """Whether helium is among the slow variables: it has levels, and there is some."""
         return self.helium.n_max > 0 and self.cosmology.helium_ratio() > 0.0
 
-    def require_inert_helium(self, who: str) -> None:
-        """Raise InputError, which names `who` asks, where helium recombines."""
-        if self.helium_recombines:
-            raise InputError(
-                f"helium.n_max = {self.helium.n_max}: {who} knows hydrogen alone; allowed there is "
-                "0 (helium neutral and inert)"
-            )
-
     @property
     def frequency_step(self) -> float:
         """Width of the cells of a resolved field in ln nu (dimensionless), asked or chosen."""
@@ -290,6 +283,10 @@ class Setup:
         import tomli_w
 
         return tomli_w.dumps(_plain(dataclasses.asdict(self)))
+
+    def _repr_html_(self) -> str:
+        """Show the setup in a notebook, under its title and digest."""
+        return html_text(f"Setup {self.digest}: {self.title or '(no title)'}", self.to_toml())
 
     @property
     def digest(self) -> str:
@@ -310,8 +307,11 @@ def _plain(values: Mapping[str, Any]) -> dict[str, Any]:
     return {k: list(v) if isinstance(v, tuple) else v for k, v in scalars.items()} | tables
 
 
-def parse_setup(text: str, where: str = "setup") -> Setup:
-    """Read a setup from TOML text; every complaint is listed at once with its path."""
+def parse_setup(text: str, where: str = "setup", with_files: bool = True) -> Setup:
+    """Read a setup from TOML text; every complaint is listed at once with its path.
+
+    Where `with_files` is False the text must hold everything itself: no other file is opened.
+    """
     try:
         values = tomllib.loads(text)
     except (
@@ -320,9 +320,18 @@ def parse_setup(text: str, where: str = "setup") -> Setup:
     ) as error:  # TOMLDecodeError is a ValueError; so are huge numbers
         raise InputError(f"{where}: not valid TOML: {error}") from None
     try:
+        if not with_files:
+            _refuse_files(values)
         return build(Setup, values)
     except InputError as error:
         raise InputError(f"{where}: {error}") from None
+
+
+def _refuse_files(values: Mapping[str, Any]) -> None:
+    for table, key in (("cosmology", "expansion_table"), ("rates", "overrides")):
+        part = values.get(table)
+        if isinstance(part, Mapping) and part.get(key) is not None:
+            raise InputError(f"{table}.{key}: names a file; allowed here are its rows alone")
 
 
 def load_setup(path: str | Path) -> Setup:

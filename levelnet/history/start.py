@@ -13,7 +13,7 @@ from ..atomic.detailed_balance import log_saha_factor
 from ..background.matter import saha_log_odds
 from ..errors import InputError
 from .equations import SlowEquations
-from .helium import Around
+from .ion_network import Around
 
 # T_r between which a hand-over is looked for, in steps of 5 per cent; at the upper end hydrogen is
 # in Saha equilibrium in any cosmology the setup admits.

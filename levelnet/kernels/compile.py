@@ -1,12 +1,17 @@
 """The one decorator for compiled kernels."""
 
+from __future__ import annotations
+
 import hashlib
+import io
 import os
-from collections.abc import Callable
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
 from pathlib import Path
 from typing import Any, TypeVar, cast
 
 import numba
+from numba.core.caching import IndexDataCacheFile
 from numba.extending import intrinsic
 
 Function = TypeVar("Function", bound=Callable[..., Any])
@@ -30,7 +35,8 @@ def kernel(function: Function) -> Function:
 
     A kernel calls only kernels, of its own file or of another, and takes every physical constant as
     an argument: numba itself notices changes in a kernel's own file and no others, so that the
-    folder on disk is named by the text of all of them.
+    folder on disk is named by the text of all of them. The files there end in their checksum; what
+    is damaged is compiled anew.
     """
     # numba chooses the folder here; where it cannot be written it takes one of its own.
     own, _options.CACHE_DIR = _options.CACHE_DIR, _FOLDER
@@ -84,4 +90,43 @@ borrowed: Callable[[Any], Any] = cast(Any, intrinsic(_borrowed))
 
 def _compiled(function: Function, cache: bool) -> Function:
     compile_with = numba.njit(cache=cache, error_model="numpy", fastmath=False, nogil=True)
-    return cast(Function, compile_with(function))
+    compiled = compile_with(function)
+    files = getattr(getattr(compiled, "_cache", None), "_cache_file", None)
+    if isinstance(files, IndexDataCacheFile):  # not where compilation is switched off
+        files.__class__ = _CheckedFiles
+    return cast(Function, compiled)
+
+
+_NumbaFiles: Any = IndexDataCacheFile  # numba states no types
+
+
+class _CheckedFiles(_NumbaFiles):  # type: ignore[misc]
+    """Files of one kernel in numba's cache, which itself would run machine code with flipped bits.
+
+    The checksum follows the data, where numba does not look.
+    """
+
+    def _load_index(self) -> Any:
+        return super()._load_index() if _is_sound(self._index_path) else {}
+
+    def _load_data(self, name: str) -> Any:
+        if not _is_sound(self._data_path(name)):
+            raise FileNotFoundError(name)  # numba then compiles, as it does for a file removed
+        return super()._load_data(name)
+
+    @contextmanager
+    def _open_for_write(self, filepath: str) -> Iterator[io.BytesIO]:
+        with super()._open_for_write(filepath) as file:
+            buffer = io.BytesIO()
+            yield buffer
+            data = buffer.getvalue()
+            file.write(data + hashlib.sha256(data).digest())
+
+
+def _is_sound(path: str) -> bool:
+    try:
+        content = Path(path).read_bytes()
+    except OSError:
+        return False
+    size = hashlib.sha256().digest_size
+    return hashlib.sha256(content[:-size]).digest() == content[-size:]

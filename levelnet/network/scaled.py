@@ -4,19 +4,24 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass, replace
+from typing import TypeVar
 
+from ..atomic.helium_levels import HeliumLevels
+from ..atomic.levels import LevelSet
 from ..atomic.physics import UNCHANGED, Scales
 from ..background.conditions import Conditions
 from ..errors import RangeError
 from .reduced import KeptLevels, Reduced, ReducedRates
 
+Levels = TypeVar("Levels", KeptLevels, LevelSet, HeliumLevels)
 
-def scaled_levels(kept: KeptLevels, scales: Scales) -> KeptLevels:
-    """Kept levels with every energy scaled."""
+
+def scaled_levels(levels: Levels, scales: Scales) -> Levels:
+    """Levels with every energy scaled: the kept ones, or all of an atom."""
     return replace(
-        kept,
-        energy_ev=kept.energy_ev * scales.energy,
-        ionization_energy_ev=kept.ionization_energy_ev * scales.energy,
+        levels,
+        energy_ev=levels.energy_ev * scales.energy,
+        ionization_energy_ev=levels.ionization_energy_ev * scales.energy,
     )
 
 

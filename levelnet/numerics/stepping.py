@@ -1,6 +1,7 @@
 """One error-controlled implicit step method: a six-stage Rosenbrock method of order 4(3).
 
-L-stable and stiffly accurate; one Jacobian and one factorization a step, no Newton iteration.
+L-stable and stiffly accurate; one Jacobian and one factorization a step, no Newton iteration. The
+Jacobian comes with the rate there, which is also the first of the six stages.
 
 References
 ----------
@@ -14,6 +15,7 @@ from __future__ import annotations
 import math
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
+from typing import NamedTuple
 
 import numpy as np
 from scipy.linalg import lapack
@@ -22,7 +24,27 @@ from ..arrays import FloatArray
 from ..errors import Outcome, SolveError
 
 Rate = Callable[[float, FloatArray], FloatArray]
-Jacobian = Callable[[float, FloatArray], tuple[FloatArray, FloatArray]]
+
+
+class Slopes(NamedTuple):
+    """The right-hand side at one time and state, linearized.
+
+    Attributes
+    ----------
+    rate : ndarray, shape (n,)
+        dy/dt.
+    matrix : ndarray, shape (n, n)
+        Its derivatives by the state.
+    drift : ndarray, shape (n,)
+        Its derivatives by time.
+    """
+
+    rate: FloatArray
+    matrix: FloatArray
+    drift: FloatArray
+
+
+Linearize = Callable[[float, FloatArray], Slopes]
 
 _GAMMA = 0.25
 _A = (
@@ -66,7 +88,8 @@ class Trajectory:
     outcome : Outcome
         How it ended; where it is not CONVERGED the arrays end early.
     rejected, evaluations : int
-        Steps thrown away; evaluations of the right-hand side, Jacobians counted as one.
+        Steps thrown away; evaluations of the right-hand side, those with its Jacobian counted as
+        one.
     """
 
     time: FloatArray
@@ -77,7 +100,7 @@ class Trajectory:
 
 
 def rosenbrock_step(
-    rate: Rate, jacobian: Jacobian, time: float, state: FloatArray, first: FloatArray, step: float
+    rate: Rate, here: Slopes, time: float, state: FloatArray, step: float
 ) -> tuple[FloatArray, FloatArray]:
     """Take one step.
 
@@ -85,19 +108,18 @@ def rosenbrock_step(
     ----------
     rate : callable
         dy/dt = rate(t, y).
-    jacobian : callable
-        (d rate/d y, d rate/d t) at (t, y), shapes (n, n) and (n,).
-    time, state, first, step : float, ndarray (n,), ndarray (n,), float
-        Where the step starts, with first = rate(time, state), and its length.
+    here : Slopes
+        That function where the step starts.
+    time, state, step : float, ndarray (n,), float
+        Where that is, and its length.
 
     Returns
     -------
     state, error : ndarray, shape (n,)
         The state after the step, and its estimated error.
     """
-    slope, drift = jacobian(time, state)
     n = len(state)
-    lu, pivots, _ = lapack.dgetrf(np.eye(n) / (step * _GAMMA) - slope)
+    lu, pivots, _ = lapack.dgetrf(np.eye(n) / (step * _GAMMA) - here.matrix)
     stages: list[FloatArray] = []
     point = state
     for k in range(6):
@@ -107,8 +129,8 @@ def rosenbrock_step(
             point = point + stages[-1]
         if not np.isfinite(point).all():
             return point, np.full(n, np.inf)  # a step far too long
-        value = first if k == 0 else rate(time + _NODE[k] * step, point)
-        right = value + step * _TIME[k] * drift
+        value = here.rate if k == 0 else rate(time + _NODE[k] * step, point)
+        right = value + step * _TIME[k] * here.drift
         for c, u in zip(_C[k], stages, strict=True):
             right = right + (c / step) * u
         stages.append(lapack.dgetrs(lu, pivots, right)[0])
@@ -117,7 +139,7 @@ def rosenbrock_step(
 
 def integrate(  # noqa: PLR0913 (each is a choice of the caller)
     rate: Rate,
-    jacobian: Jacobian,
+    linearize: Linearize,
     start: float,
     state: FloatArray,
     outputs: Sequence[float],
@@ -132,8 +154,8 @@ def integrate(  # noqa: PLR0913 (each is a choice of the caller)
 
     Parameters
     ----------
-    rate, jacobian : callable
-        As for :func:`rosenbrock_step`; their SolveError ends the integration with its outcome.
+    rate, linearize : callable
+        dy/dt and its Slopes at (t, y); their SolveError ends the integration with its outcome.
     start : float
         Initial time.
     state : ndarray, shape (n,)
@@ -158,9 +180,9 @@ def integrate(  # noqa: PLR0913 (each is a choice of the caller)
         Accepted points and the outcome.
     """
     now, y, step = start, np.asarray(state, dtype=np.float64), first_step
-    slope = rate(now, y)
+    here: Slopes | None = None
     times, states = [now], [y]
-    rejected, evaluations, outcome = 0, 1, Outcome.CONVERGED
+    rejected, evaluations, outcome = 0, 0, Outcome.CONVERGED
     for target in outputs:
         while now < target and outcome.ok:
             if len(times) + rejected > max_steps:
@@ -173,11 +195,15 @@ def integrate(  # noqa: PLR0913 (each is a choice of the caller)
             end = target if pieces == 1 else now + trial
             try:
                 allowed = tolerance(y) if callable(tolerance) else tolerance
-                new, new_slope, size = _attempt(rate, jacobian, (now, end), y, slope, allowed)
+                if here is None:
+                    here, evaluations = linearize(now, y), evaluations + 1
+                new, error = rosenbrock_step(rate, here, now, y, end - now)
             except SolveError as failure:
                 outcome = failure.outcome
                 break
-            evaluations += 7
+            evaluations += 5
+            size = float(np.max(np.abs(error) / allowed))
+            size = size if np.isfinite(size) else np.inf
             factor = min(_GROW, max(_SHRINK, _SAFETY * max(size, 1e-12) ** -0.25))
             if size > 1.0:
                 rejected += 1
@@ -186,25 +212,9 @@ def integrate(  # noqa: PLR0913 (each is a choice of the caller)
                     outcome = Outcome.STEP_TOO_SMALL
                 continue
             step = trial * factor if pieces > 1 or factor < 1.0 else max(step, trial * factor)
-            now, y, slope = end, new, new_slope
+            now, y, here = end, new, None
             times.append(now)
             states.append(y)
             if on_step is not None:
                 on_step(now, y)
     return Trajectory(np.array(times), np.array(states), outcome, rejected, evaluations)
-
-
-def _attempt(
-    rate: Rate,
-    jacobian: Jacobian,
-    span: tuple[float, float],
-    state: FloatArray,
-    first: FloatArray,
-    tolerance: float | FloatArray,
-) -> tuple[FloatArray, FloatArray, float]:
-    """One step over `span`: new state, its rate (where it is good), error over tolerance."""
-    new, error = rosenbrock_step(rate, jacobian, span[0], state, first, span[1] - span[0])
-    size = float(np.max(np.abs(error) / tolerance))
-    if not np.isfinite(size):
-        return new, first, np.inf
-    return new, rate(span[1], new) if size <= 1.0 else first, size

@@ -34,20 +34,31 @@ def make_figures(history: History, redshift: float | None = None) -> dict[str, F
     redshift : float or None, dimensionless
         The output nearest to it is drawn as the map; None takes the visibility peak.
     """
-    made = (
-        history_figure(history),
-        departure_map_figure(history, redshift),
-        departure_curves_figure(history),
-        channel_figure(history),
-        visibility_figure(history),
+    return {name: make() for name, make in figure_makers(history, redshift).items()}
+
+
+def figure_makers(
+    history: History, redshift: float | None = None
+) -> dict[str, Callable[[], Figure]]:
+    """What makes each figure of :func:`make_figures`, by its name."""
+    makers: tuple[Callable[[], Figure], ...] = (
+        lambda: history_figure(history),
+        lambda: departure_map_figure(history, redshift),
+        lambda: departure_curves_figure(history),
+        lambda: channel_figure(history),
+        lambda: visibility_figure(history),
     )
-    figures = dict(zip(FIGURE_NAMES, made, strict=True))
+    named = dict(zip(FIGURE_NAMES, makers, strict=True))
     if history.field is not None:
-        figures[FIELD_FIGURE_NAME] = spectrum_figure(history)
+        named[FIELD_FIGURE_NAME] = lambda: spectrum_figure(history)
     if history.helium is not None:
-        drawn = helium_figure, helium_departures_figure, helium_lines_figure
-        figures |= {n: draw(history) for n, draw in zip(HELIUM_FIGURE_NAMES, drawn, strict=True)}
-    return figures
+        of_helium: tuple[Callable[[], Figure], ...] = (
+            lambda: helium_figure(history),
+            lambda: helium_departures_figure(history),
+            lambda: helium_lines_figure(history),
+        )
+        named |= zip(HELIUM_FIGURE_NAMES, of_helium, strict=True)
+    return named
 
 
 def figure_paths(

@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from ..arrays import FloatArray
+from ..distilled.fast import FastHistory
 from ..history.result import Channels, History
 from . import style
 
@@ -18,12 +19,12 @@ _EARLY = 3000.0  # outputs from above this redshift leave the right half of the 
 _CURVES = 5  # channels drawn one by one; the rest is summed into one curve
 
 
-def history_figure(history: History) -> Figure:
+def history_figure(history: History | FastHistory) -> Figure:
     """Ionized and neutral fraction, and both temperatures, against redshift.
 
     Parameters
     ----------
-    history : History
+    history : History or FastHistory
         Any result.
 
     Returns
@@ -41,7 +42,7 @@ def history_figure(history: History) -> Figure:
     return figure
 
 
-def _draw_fractions(axes: Axes, history: History) -> None:
+def _draw_fractions(axes: Axes, history: History | FastHistory) -> None:
     redshift = history.redshift
     for values, label, colour, dash in (
         (history.free_electron_fraction, r"free electrons, $x_e = n_e/n_\mathrm{H}$", "BLUE", "-"),
@@ -57,14 +58,15 @@ def _draw_fractions(axes: Axes, history: History) -> None:
     axes.set_xlim(float(redshift[-1]), float(redshift[0]))
     axes.set_xlabel(r"redshift $z$")
     axes.set_ylabel("fraction of hydrogen nuclei")
-    _mark_redshift(axes, history.milestones.half_ionized_redshift, "$x_e = 0.5$")
+    if isinstance(history, History):
+        _mark_redshift(axes, history.milestones.half_ionized_redshift, "$x_e = 0.5$")
     if redshift[0] > _EARLY:
         axes.legend(loc="center right")  # right of where both fall
     else:  # below the curves near 1 and above the tail of x_e
         axes.legend(loc="upper left", bbox_to_anchor=(0.0, 0.86))
 
 
-def _draw_temperatures(axes: Axes, history: History) -> None:
+def _draw_temperatures(axes: Axes, history: History | FastHistory) -> None:
     stretch = 1.0 + history.redshift
     axes.loglog(
         stretch, history.radiation_temperature_k, "--", color=style.AMBER, label=r"radiation $T_r$"

@@ -9,6 +9,7 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 from contextlib import contextmanager
+from functools import cache
 from io import BytesIO
 from typing import TYPE_CHECKING, Any
 
@@ -73,10 +74,26 @@ def house_style() -> Iterator[None]:
 
 
 def new_figure(width_in: float, height_in: float) -> Figure:
-    """Return an empty figure of the given size in inches, free of any global state."""
+    """Return an empty figure of the given size in inches, free of any global state.
+
+    A notebook shows it as SVG, without any setting there; showing it fixes its layout.
+    """
+    made: Figure = _shown_figure()(figsize=(width_in, height_in))
+    return made
+
+
+@cache
+def _shown_figure() -> type[Figure]:
+    """Kind of figure that a notebook can show; made late, for matplotlib is slow to import."""
     from matplotlib.figure import Figure
 
-    return Figure(figsize=(width_in, height_in))
+    class ShownFigure(Figure):
+        """A figure of matplotlib that draws itself where HTML is shown."""
+
+        def _repr_svg_(self) -> str:
+            return render(self, "svg").decode()
+
+    return ShownFigure
 
 
 def panel_letter(axes: Axes, letter: str) -> None:

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import re
 from collections.abc import Callable, Sequence
+from functools import partial
 from pathlib import Path
 from typing import TYPE_CHECKING
 
@@ -90,15 +91,26 @@ def save_weighing_figures(
     helium = weighing.helium is not None
     places = figure_paths(weighing.targets, _has_band(weighing), folder, helium)
     check_place(folder, places, force)
-    figures: dict[str, Figure] = {}
+    return save_drawn(make_weighing_figures(weighing), folder, progress)
+
+
+def make_weighing_figures(weighing: Weighing) -> dict[str, Figure]:
+    """Every figure of a weighing by its name: map and rankings of each target, and the band."""
+    return {name: make() for name, make in weighing_makers(weighing).items()}
+
+
+def weighing_makers(weighing: Weighing) -> dict[str, Callable[[], Figure]]:
+    """What makes each figure of :func:`make_weighing_figures`, by its name."""
+    makers: dict[str, Callable[[], Figure]] = {}
     for target, name in zip(weighing.targets, file_names(weighing.targets), strict=True):
-        figures[f"map-{name}"] = importance_figure(weighing, target, target_label(target))
-        figures[f"ranking-{name}"] = ranking_figure(weighing, target)
+        label = target_label(target)
+        makers[f"map-{name}"] = partial(importance_figure, weighing, target, label)
+        makers[f"ranking-{name}"] = partial(ranking_figure, weighing, target)
         if weighing.helium is not None:
-            figures[f"helium-{name}"] = helium_figure(weighing, target, target_label(target))
+            makers[f"helium-{name}"] = partial(helium_figure, weighing, target, label)
     if weighing.budget is not None and _has_band(weighing):
-        figures["error-band"] = band_figure(weighing.budget)
-    return save_drawn(figures, folder, progress)
+        makers["error-band"] = partial(band_figure, weighing.budget)
+    return makers
 
 
 def figure_paths(

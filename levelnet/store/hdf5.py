@@ -7,85 +7,106 @@ larger than what the stored bytes can hold.
 
 from __future__ import annotations
 
-from collections.abc import Iterable
-from pathlib import Path
-from typing import TYPE_CHECKING, Any
+from collections.abc import Iterable, Iterator
+from typing import TYPE_CHECKING, Any, BinaryIO, NamedTuple
 
 import numpy as np
-from numpy.typing import NDArray
 
 from ..errors import FileFormatError
-from . import layout
-from .schema import Content, Group, Layout, Stored, Variable, number_type
+from .schema import Group, Layout, Variable, number_type
 
 if TYPE_CHECKING:
     import h5py
 
 # Deflate cannot shrink more than 1032 to 1 (RFC 1951: 258 bytes from two bits), and some room.
 _MOST_COMPRESSED = 1100
+_SLAB_BYTES = 1 << 24
 # What HDF5 itself attaches to datasets with named dimensions.
 _MACHINERY = frozenset({"CLASS", "NAME", "DIMENSION_LIST", "REFERENCE_LIST"})
+
+
+class Piece(NamedTuple):
+    """A part of the content of a file: what it is, fit for JSON, and its numbers as bytes."""
+
+    head: dict[str, Any]
+    numbers: Iterator[bytes] = iter(())
 
 
 class Damage(Exception):
     """What is wrong with a file, for one line of text."""
 
 
-def load(path: Path, layouts: Iterable[Layout] = (layout.HISTORY_LAYOUT,)) -> Content:
-    """Read everything a layout names from the HDF5 file at `path`.
+def load(stream: BinaryIO, layouts: Iterable[Layout]) -> Iterator[Piece]:
+    """Take everything a layout names out of an HDF5 file, piece by piece.
 
     Parameters
     ----------
-    path : Path
-        The file.
+    stream : binary file
+        The file. It is read without HDF5's own locks: files are only ever replaced whole, locks
+        fail on some network disks, and the file may be open in xarray in this very process.
     layouts : iterable of Layout
         Kinds of files that are known.
+
+    Yields
+    ------
+    Piece
+        The attributes of the file, then each group, then each of its variables.
 
     Raises
     ------
     FileFormatError
-        If the file is of another kind or a newer layout; names `path`.
+        If the file is of another kind or a newer layout; says so without a path.
     Damage
         If anything differs from the layout. HDF5's own complaints come through as they are.
     """
     import h5py
 
-    # Through a stream of our own, without HDF5's locks: files are only ever replaced whole, locks
-    # fail on some network disks, and the file may be open in xarray in this very process.
-    with path.open("rb") as stream, h5py.File(stream, "r") as file:
-        chosen = _layout_of(file, path, layouts)
-        content = Content(attributes=_attributes(file, chosen.attributes, ""))
+    with h5py.File(stream, "r") as file:
+        chosen = _layout_of(file, layouts)
+        attributes = _attributes(file, chosen.attributes, "")
+        yield Piece({"attributes": attributes})
+        chosen = _own_layout(chosen, attributes)
         known = {one.name: one for one in (*chosen.required, *chosen.optional)}
         required = [one.name for one in chosen.required]
         for name in _members(file, "", known, required):
-            _load_group(file, known[name], content)
-    return content
+            yield from _load_group(file, known[name])
 
 
-def _layout_of(file: h5py.File, path: Path, layouts: Iterable[Layout]) -> Layout:
+def _layout_of(file: h5py.File, layouts: Iterable[Layout]) -> Layout:
     """Refuse what is not ours or too new, before anything else is looked at."""
     name = _attribute(file, "layout", "")
     chosen = next((one for one in layouts if one.name == name), None)
     if chosen is None:
-        raise FileFormatError(f"{path}: HDF5, but not a file of levelnet")
+        raise FileFormatError("HDF5, but not a file of levelnet")
     found = _attribute(file, "layout_version", "")
     if not isinstance(found, int) or found < 1:
         raise Damage(f"layout_version = {found!r} is no version")
     if found > chosen.version:
         raise FileFormatError(
-            f"{path}: layout version {found} is newer than {chosen.version}, the newest "
-            "that this levelnet reads; update levelnet"
+            f"layout version {found} is newer than {chosen.version}, the newest that this levelnet "
+            "reads; update levelnet"
         )
     return chosen
 
 
-def _load_group(file: h5py.File, group: Group, content: Content) -> None:
+def _own_layout(chosen: Layout, attributes: dict[str, Any]) -> Layout:
+    """The layout of this very file, where it depends on attributes."""
+    if chosen.by_attributes is None:
+        return chosen
+    try:
+        return chosen.by_attributes(attributes)
+    except ValueError as error:
+        raise Damage(str(error)) from None
+
+
+def _load_group(file: h5py.File, group: Group) -> Iterator[Piece]:
     import h5py
 
     where = group.name
     # By the low level, since a link of a wrong kind must not be followed.
     handle = h5py.Group(h5py.h5g.open(file.id, where.encode()))
-    content.groups[where] = _checked(_attributes(handle, group.attributes, where), group, where)
+    given = _attributes(handle, group.attributes, where)
+    yield Piece({"group": where, "attributes": _checked(given, group, where)})
     names = [one.name for one in group.variables]
     _members(handle, where, names, names)
     scales: dict[str, h5py.Dataset] = {}
@@ -98,9 +119,13 @@ def _load_group(file: h5py.File, group: Group, content: Content) -> None:
         scales[one.name] = dataset
         _check_dimensions(dataset, one, path, scales)
         given = _attributes(dataset, one.attributes, path, _MACHINERY)
-        values = _text(dataset, path, file) if one.kind == "text" else _numbers(dataset)
-        stored = Stored(one.dimensions, _checked(given, one, path), values)
-        content.variables[path] = stored
+        head: dict[str, Any] = {"variable": path, "dimensions": one.dimensions}
+        head["attributes"] = _checked(given, one, path)
+        if one.kind == "text":
+            yield Piece(head | {"texts": _text(dataset, path, file)})
+        else:
+            head |= {"type": dataset.dtype.str, "shape": dataset.shape}
+            yield Piece(head, _numbers(dataset))
 
 
 def _checked(given: dict[str, Any], wanted: Group | Variable, where: str) -> dict[str, str]:
@@ -220,8 +245,18 @@ def path_name(path: str) -> bytes:
     return path.rpartition("/")[2].encode()
 
 
-def _numbers(dataset: h5py.Dataset) -> NDArray[Any]:
-    return np.asarray(dataset[()])
+def _numbers(dataset: h5py.Dataset) -> Iterator[bytes]:
+    """Read the numbers in order, not much more than `_SLAB_BYTES` at a time."""
+    if dataset.size == 0:
+        return
+    if not dataset.shape:
+        yield dataset[()].tobytes()
+        return
+    per_row = dataset.size // dataset.shape[0] * dataset.dtype.itemsize
+    chunk = dataset.chunks[0] if dataset.chunks else 1
+    rows = max(1, _SLAB_BYTES // (per_row * chunk)) * chunk  # whole chunks: each is read once
+    for start in range(0, dataset.shape[0], rows):
+        yield dataset[start : start + rows].tobytes()
 
 
 def _text(dataset: h5py.Dataset, path: str, file: h5py.File) -> tuple[str, ...]:

@@ -2,9 +2,11 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping, Sequence
 from typing import Any
 
 from ..errors import FileFormatError, Outcome
+from ..history.setup import Setup, parse_setup
 from . import layout
 from .schema import Content, Group, Layout
 
@@ -15,6 +17,26 @@ def outcome_of(content: Content) -> Outcome:
     if outcome not in Outcome.__members__:
         raise FileFormatError(f'outcome "{outcome}" is not known to this levelnet')
     return Outcome[outcome]
+
+
+def setup_of(content: Content) -> Setup:
+    """Setup of the run that a file is from; InputError where it names another file."""
+    return parse_setup(str(content.attributes["setup"]), "stored setup", with_files=False)
+
+
+def check_positions(parts: Mapping[str, Any], names: Sequence[str], count: int) -> None:
+    """Raise FileFormatError where an array of `parts` names a level that is none of `count`."""
+    for name in names:
+        if len(parts[name]) and not 0 <= parts[name].min() <= parts[name].max() < count:
+            raise FileFormatError(f"{name}: names levels that are not in the file")
+
+
+def check_together(parts: Mapping[str, Any], names: Sequence[str], what: str) -> None:
+    """Raise FileFormatError where some of `names` are among `parts` and others are not."""
+    there = [name for name in names if parts.get(name) is not None]
+    if there and len(there) < len(names):
+        missing = next(name for name in names if name not in there)
+        raise FileFormatError(f"{what}: {missing} is missing")
 
 
 def all_fields(content: Content, kind: Layout) -> dict[str, Any]:

@@ -3,14 +3,13 @@
 from __future__ import annotations
 
 import os
-import stat
 from collections.abc import Callable
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 from ..atomic.helium_levels import HeliumLevels
 from ..atomic.levels import LevelSet
-from ..errors import FileFormatError, InputError, LevelnetError
+from ..errors import FileFormatError, InputError
 from ..history.helium_record import HeliumFigures, HeliumLineFigures
 from ..history.line_figures import LineFigures
 from ..history.result import (
@@ -21,15 +20,25 @@ from ..history.result import (
     RadiationField,
     SpeciesPopulations,
 )
-from ..history.setup import parse_setup
+from ..texts import opened
 from . import layout
+from .apart import identity, load_apart
 from .digest import content_digest, seal_fault
 from .escape_layout import ESCAPE_LAYOUT
-from .hdf5 import Damage, load
+from .hdf5 import Damage
 from .level_layout import LEVEL_LAYOUT
-from .parts import all_fields, fields_of, merge, outcome_of
+from .parts import (
+    all_fields,
+    check_positions,
+    check_together,
+    fields_of,
+    merge,
+    outcome_of,
+    setup_of,
+)
 from .schema import Content, Layout
 from .study_makers import escape_study_of, level_study_of, weighing_of
+from .sweep_layout import SWEEP_LAYOUT, sweep_of
 from .table_layout import DISTILLED_LAYOUT, TABLE_LAYOUT
 from .weighing_layout import WEIGHING_LAYOUT
 
@@ -38,15 +47,16 @@ if TYPE_CHECKING:
     from ..distilled.table import EffectiveTable
     from ..studies.escape_records import EscapeStudy
     from ..studies.level_records import LevelStudy
+    from ..studies.sweep_record import Sweep
     from ..studies.weighing import Weighing
 
-    Record = History | EffectiveTable | FastHistory | Weighing | LevelStudy | EscapeStudy
+    Record = History | EffectiveTable | FastHistory | Weighing | LevelStudy | EscapeStudy | Sweep
 
 _HDF5_SIGNATURE = b"\x89HDF\r\n\x1a\n"
 
 
 def read(path: str | Path) -> Record:
-    """Read a history, a table of effective rates, a history made from one, or a study.
+    """Read a history, a table of effective rates, a history made from one, a study, or a sweep.
 
     Parameters
     ----------
@@ -55,7 +65,7 @@ def read(path: str | Path) -> Record:
 
     Returns
     -------
-    History, EffectiveTable, FastHistory, Weighing, LevelStudy or EscapeStudy
+    History, EffectiveTable, FastHistory, Weighing, LevelStudy, EscapeStudy or Sweep
         Equal to what was written, to the bit.
 
     Raises
@@ -64,6 +74,12 @@ def read(path: str | Path) -> Record:
         If the file is missing, foreign, damaged or of a newer layout; one line that names it.
     """
     return _record(path, read_content(path))
+
+
+def read_with_attributes(path: str | Path) -> tuple[Record, dict[str, str | int]]:
+    """Read a record with what its file says of itself, in one pass; as :func:`read`."""
+    content = read_content(path)
+    return _record(path, content), content.attributes
 
 
 def _record(path: str | Path, content: Content) -> Record:
@@ -94,20 +110,17 @@ def read_attributes(path: str | Path) -> dict[str, str | int]:
 
 
 def read_content(path: str | Path) -> Content:
-    """Read all that a file says and hold it against layout and digest."""
+    """Read all that a file says and hold it against seal, layout and digest."""
     place = Path(path)
-    _check_bytes(place)
+    checked = _check_bytes(place)
     try:
-        content = load(place, (kind for kind, _ in _MAKERS.values()))
-    except LevelnetError:
-        raise
+        content = load_apart(place, checked)
     except Damage as error:
         raise FileFormatError(f"{path}: damaged: {_line(error)}") from None
+    except FileFormatError as error:
+        raise FileFormatError(f"{path}: {_line(error)}") from None
     except MemoryError:
         raise FileFormatError(f"{path}: larger than the memory of this machine") from None
-    except Exception as error:
-        # Over damaged bytes h5py raises nearly any kind of exception.
-        raise FileFormatError(f"{path}: damaged: {_line(error)}") from error
     if content.attributes["digest"] != content_digest(content):
         raise FileFormatError(f"{path}: damaged: the content does not have the digest it states")
     return content
@@ -119,20 +132,20 @@ def _line(error: Exception) -> str:
     return "".join(letter if letter.isprintable() else "?" for letter in text[:300])
 
 
-def _check_bytes(path: Path) -> None:
-    """Refuse what is no file, not HDF5 or damaged, without handing it to HDF5."""
+def _check_bytes(path: Path) -> list[int]:
+    """Refuse what is no file, not HDF5 or damaged, without handing it to HDF5; return which."""
     try:
-        # Opening a pipe would wait for a writer, so the kind is asked first.
-        if not stat.S_ISREG(os.stat(path).st_mode):
-            raise FileFormatError(f"{path}: cannot be read: not a plain file")
-        with open(path, "rb") as raw:
+        with opened(path) as raw:
             is_hdf5 = raw.read(len(_HDF5_SIGNATURE)) == _HDF5_SIGNATURE
             fault = seal_fault(raw) if is_hdf5 else "not an HDF5 file"
-    except (OSError, ValueError) as error:
-        reason = (error.strerror if isinstance(error, OSError) else None) or str(error)
-        raise FileFormatError(f"{path}: cannot be read: {reason}") from None
+            checked = identity(os.fstat(raw.fileno()))
+    except InputError as error:
+        raise FileFormatError(str(error)) from None
+    except OSError as error:
+        raise FileFormatError(f"{path}: cannot be read: {error.strerror or error}") from None
     if fault:
         raise FileFormatError(f"{path}: {fault}")
+    return checked
 
 
 def history_of(content: Content) -> History:
@@ -150,7 +163,7 @@ def history_of(content: Content) -> History:
         merge(parts, fields)
     field, helium = parts.pop("field", None), parts.pop("helium", None)
     return History(
-        setup=parse_setup(str(content.attributes["setup"]), "stored setup"),
+        setup=setup_of(content),
         outcome=outcome_of(content),
         species=tuple(populations),
         channels=Channels(**parts.pop("channels")),
@@ -202,10 +215,12 @@ def table_of(content: Content) -> EffectiveTable:
     kept = KeptLevels(**parts.pop("kept"))
     if parts["equilibrium"].shape[1] != len(kept):
         raise FileFormatError("levels: their number differs from that of the table")
+    check_positions(parts, ("lower", "upper"), len(kept))
     certificate, lines = parts.pop("certificate", None), parts.pop("helium_lines", None)
     helium, ion = parts.pop("helium", None), parts.pop("helium_ion", None)
+    _check_helium(helium, ion, lines)
     return EffectiveTable(
-        setup=parse_setup(str(content.attributes["setup"]), "stored setup"),
+        setup=setup_of(content),
         kept=kept,
         certificate=None if certificate is None else Certificate(**certificate),
         helium=None if helium is None else StageTable(**helium),
@@ -215,6 +230,27 @@ def table_of(content: Content) -> EffectiveTable:
     )
 
 
+def _check_helium(
+    helium: dict[str, Any] | None, ion: dict[str, Any] | None, lines: dict[str, Any] | None
+) -> None:
+    """Refuse parts of helium without the others, and places in them that are none."""
+    check_together({"helium": helium, "helium_lines": lines}, ("helium", "helium_lines"), "helium")
+    if helium is None or lines is None:
+        if ion is not None:
+            raise FileFormatError("helium: helium is missing")
+        return
+    for stage in (helium, ion):
+        if stage is not None:
+            check_positions(stage, ("lower", "upper"), len(stage["n"]))
+    check_positions(lines, ("upper",), len(helium["n"]))
+    if not 0 <= lines["decay"] < len(helium["n"]):
+        raise FileFormatError("decay: names a level that is not in the file")
+    if not (lines["lit_by"] < len(lines["names"])).all():
+        raise FileFormatError("lit_by: names a line that is not in the file")
+    if lines["absorbs"] and min(lines["escape"].shape[1:]) < 4:  # a cubic has four coefficients
+        raise FileFormatError("escape: 4 coefficients at least are needed along each axis")
+
+
 _MAKERS: dict[str, tuple[Layout, Callable[[Content], Record]]] = {
     layout.LAYOUT_NAME: (layout.HISTORY_LAYOUT, history_of),
     TABLE_LAYOUT.name: (TABLE_LAYOUT, table_of),
@@ -222,4 +258,5 @@ _MAKERS: dict[str, tuple[Layout, Callable[[Content], Record]]] = {
     WEIGHING_LAYOUT.name: (WEIGHING_LAYOUT, weighing_of),
     LEVEL_LAYOUT.name: (LEVEL_LAYOUT, level_study_of),
     ESCAPE_LAYOUT.name: (ESCAPE_LAYOUT, escape_study_of),
+    SWEEP_LAYOUT.name: (SWEEP_LAYOUT, sweep_of),
 }

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass, field
 from typing import Any, Literal
 
@@ -76,6 +77,9 @@ class Layout:
         Attributes of the file and what they mean.
     required, optional : tuple of Group
         Groups that every file has, in the order of writing, and those that a file may have.
+    by_attributes : callable or None
+        Makes the layout of one file from its attributes, where it depends on them; ValueError where
+        they name none.
     """
 
     name: str
@@ -84,6 +88,7 @@ class Layout:
     attributes: dict[str, str]
     required: tuple[Group, ...]
     optional: tuple[Group, ...] = ()
+    by_attributes: Callable[[Mapping[str, Any]], Layout] | None = None
 
 
 @dataclass(frozen=True, slots=True, eq=False)

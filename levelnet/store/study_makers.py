@@ -10,11 +10,11 @@ from ..atomic.levels import LevelSet
 from ..errors import FileFormatError, Outcome
 from ..escape.lines import Lines
 from ..history.result import Channels, RadiationField
-from ..history.setup import Setup, parse_setup
+from ..history.setup import Setup
 from ..records import build
 from .escape_layout import ESCAPE_LAYOUT
 from .level_layout import LEVEL_LAYOUT
-from .parts import all_fields, outcome_of
+from .parts import all_fields, check_positions, check_together, outcome_of, setup_of
 from .schema import Content
 from .weighing_layout import WEIGHING_LAYOUT
 
@@ -32,20 +32,22 @@ def weighing_of(content: Content) -> Weighing:
 
     parts = all_fields(content, WEIGHING_LAYOUT)
     levels = LevelSet(**parts.pop("levels"))
-    _check_positions(parts, len(levels))
+    check_positions(parts, ("upper", "lower", "line_upper"), len(levels))
     budget = parts.pop("budget", None)
+    if budget is not None and not set(parts["targets"]) <= set(budget["targets"]):
+        raise FileFormatError("budget: lacks a target that was weighed")
     helium, ion = parts.pop("helium", None), parts.pop("helium_ion", None)
     if helium is not None:
         terms = helium.pop("levels")
         terms = HeliumLevels(n_max=int(terms["n"].max()), nuclear_charge=2, **terms)
-        _check_positions(helium, len(terms))
+        check_positions(helium, ("upper", "lower", "line_upper"), len(terms))
         helium = HeliumWeights(levels=terms, **helium)
     if ion is not None:
         ion["levels"] = LevelSet(**ion["levels"])
-        _check_positions(ion, len(ion["levels"]))
+        check_positions(ion, ("upper", "lower"), len(ion["levels"]))
         ion = IonWeights(**ion)
     return Weighing(
-        setup=parse_setup(str(content.attributes["setup"]), "stored setup"),
+        setup=setup_of(content),
         outcome=outcome_of(content),
         levels=levels,
         budget=None if budget is None else ErrorBudget(**budget),
@@ -53,13 +55,6 @@ def weighing_of(content: Content) -> Weighing:
         helium_ion=ion,
         **parts,
     )
-
-
-def _check_positions(parts: dict[str, Any], n_levels: int) -> None:
-    for name in ("upper", "lower", "line_upper"):
-        found = parts.get(name, ())
-        if len(found) and not 0 <= found.min() <= found.max() < n_levels:
-            raise FileFormatError(f"{name}: names levels that are not in the file")
 
 
 def level_study_of(content: Content) -> LevelStudy:
@@ -78,10 +73,15 @@ def level_study_of(content: Content) -> LevelStudy:
         return Estimates(**{name: Estimate(**one) for name, one in given.items()})
 
     parts = all_fields(content, LEVEL_LAYOUT)
+    ladder, low = parts["rungs"]["n_max"], parts["level_n"]
+    if len(ladder) == 0 or ladder[0] < 1 or not (ladder[1:] > ladder[:-1]).all():
+        raise FileFormatError("n_max: must ascend from 1 or above")
+    if len(low) == 0 or low.min() < 1:
+        raise FileFormatError("n: must be 1 or above")
     held, resolved = parts.pop("held_out", None), parts.pop("resolved", None)
     question = parts.pop("question", None)
     return LevelStudy(
-        setup=parse_setup(str(content.attributes["setup"]), "stored setup"),
+        setup=setup_of(content),
         outcome=outcome_of(content),
         rungs=Rungs(**parts.pop("rungs")),
         limit=estimates(parts.pop("limit")),
@@ -97,13 +97,16 @@ def escape_study_of(content: Content) -> EscapeStudy:
     """Make the study that :func:`levelnet.store.write.content_of` took apart."""
     parts = all_fields(content, ESCAPE_LAYOUT)
     helium = parts.pop("helium", None)
-    setup = parse_setup(str(content.attributes["setup"]), "stored setup")
+    setup = setup_of(content)
     found = _escape_study(parts, setup, outcome_of(content))
     if helium is None:
         return found
+    check_together(helium, _OWN, "helium")
     shared = {name: parts[name] for name in _SHARED}
-    at = int(helium["reference"])
-    name = helium["variants"]["outcome"][at]
+    at, names = int(helium["reference"]), helium["variants"]["outcome"]
+    if not 0 <= at < len(names):
+        raise FileFormatError(f"helium reference: must be 0 to {len(names) - 1}")
+    name = names[at]
     if name not in Outcome.__members__:
         raise FileFormatError(f'outcome "{name}" is not known to this levelnet')
     inner = _escape_study(helium | shared, setup, Outcome[name])
@@ -112,6 +115,7 @@ def escape_study_of(content: Content) -> EscapeStudy:
 
 # What a study of helium within one of hydrogen has in common with it.
 _SHARED = ("redshift", "observable_names", "observable_units")
+_OWN = ("reference", "variants", "switches", "reference_error", "channels", "treatments")
 
 
 def _escape_study(given: dict[str, Any], setup: Setup, outcome: Outcome) -> EscapeStudy:

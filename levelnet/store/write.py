@@ -21,6 +21,7 @@ from .escape_layout import ESCAPE_LAYOUT
 from .level_layout import LEVEL_LAYOUT
 from .provenance import provenance
 from .schema import Content, Group, Layout, Stored, Variable, number_type
+from .sweep_layout import sealed_content
 from .table_layout import DISTILLED_LAYOUT, TABLE_LAYOUT
 from .weighing_layout import WEIGHING_LAYOUT
 from .whole_file import whole_file
@@ -32,9 +33,10 @@ if TYPE_CHECKING:
     from ..distilled.table import EffectiveTable
     from ..studies.escape_records import EscapeStudy
     from ..studies.level_records import LevelStudy
+    from ..studies.sweep_record import Sweep
     from ..studies.weighing import Weighing
 
-    Storable = History | EffectiveTable | Weighing | LevelStudy | EscapeStudy
+    Storable = History | EffectiveTable | Weighing | LevelStudy | EscapeStudy | Sweep
     Record = Storable | FastHistory
 
 # Chunks of at most 64 redshifts x 2048 levels (1 MiB), the size of HDF5's chunk cache.
@@ -43,11 +45,11 @@ _CHUNK_ONE_DIMENSION = 16384
 
 
 def write(result: Storable, path: str | Path, force: bool = False) -> None:
-    """Write a history, a table of effective rates, a weighing or a study as HDF5.
+    """Write a history, a table of effective rates, a weighing, a study or a sweep as HDF5.
 
     Parameters
     ----------
-    result : History, EffectiveTable, Weighing, LevelStudy or EscapeStudy
+    result : History, EffectiveTable, Weighing, LevelStudy, EscapeStudy or Sweep
         What to store, in the layout of :mod:`levelnet.store.layout`, or of the file beside it that
         is named after the record.
     path : str or Path
@@ -99,8 +101,11 @@ def content_of(result: Storable) -> Content:
     from ..distilled.table import EffectiveTable
     from ..studies.escape_records import EscapeStudy
     from ..studies.level_records import LevelStudy
+    from ..studies.sweep_record import Sweep
     from ..studies.weighing import Weighing
 
+    if isinstance(result, Sweep):
+        return sealed_content(result)
     if isinstance(result, History):
         content = _history_content(result)
     elif isinstance(result, EffectiveTable):
@@ -114,7 +119,7 @@ def content_of(result: Storable) -> Content:
     else:
         raise InputError(
             f"write: a {type(result).__name__} cannot be stored; a History, an EffectiveTable, "
-            "a Weighing, a LevelStudy or an EscapeStudy can"
+            "a Weighing, a LevelStudy, an EscapeStudy or a Sweep can"
         )
     content.attributes["digest"] = content_digest(content)
     return content

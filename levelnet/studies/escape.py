@@ -13,7 +13,7 @@ from typing import Literal
 import numpy as np
 
 from ..arrays import FloatArray
-from ..history.cost import check_memory, estimate
+from ..history.cost import Cost, check_memory, estimate
 from ..history.integrate import Progress, output_redshifts
 from ..history.result import Channels
 from ..history.setup import Setup
@@ -125,10 +125,18 @@ def escape_plans(
     return (plan, helium_plan(setup)) if both else (plan,)
 
 
+def plan_costs(setup: Setup, plan: Plan) -> tuple[list[Setup], list[Cost]]:
+    """Setups of all variants of a plan on the grid of `setup`, and what each is to cost.
+
+    No variant has populations, and all but the base find the reduced network of hydrogen.
+    """
+    setups = [job.setup for job in _jobs(setup, plan)]
+    return setups, [estimate(one, 0, reduced=k != plan.base) for k, one in enumerate(setups)]
+
+
 def expected_seconds(setup: Setup, plans: Iterable[Plan]) -> float:
     """Process time of all variants in s, to a factor of two or three; `setup` as in the study."""
-    jobs = [job for plan in plans for job in _jobs(study_setup(setup), plan)]
-    return sum(estimate(job.setup).seconds for job in jobs)
+    return sum(one.seconds for plan in plans for one in plan_costs(study_setup(setup), plan)[1])
 
 
 def run_plans(

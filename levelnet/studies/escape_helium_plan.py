@@ -44,10 +44,10 @@ def helium_plan(setup: Setup, order: Iterable[str] | None = None) -> Plan:
         If helium is inert, or the order is none.
     """
     if not setup.helium_recombines:
-        raise InputError(
-            f"helium.n_max = {setup.helium.n_max}: helium is inert and has no lines to compare; "
-            "allowed from helium.n_max = 2, with helium in the universe"
-        )
+        none = setup.cosmology.helium_ratio() == 0.0
+        key = "cosmology.helium_mass_fraction" if none else "helium.n_max"
+        allowed = "above 0" if none else "from 2"
+        raise InputError(f"{key} = 0: helium has no lines to compare; allowed is {allowed}")
     switches = checked_order(order, HELIUM_SWITCHES, _NEEDS)
     found: list[Variant] = []
     switched_on: list[frozenset[str]] = []

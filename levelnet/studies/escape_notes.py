@@ -8,6 +8,7 @@ import numpy as np
 
 from ..arrays import FloatArray
 from ..errors import Outcome
+from .answers import WITHIN
 from .escape_records import EscapeStudy
 from .escape_verdict import (
     EscapeDemands,
@@ -19,9 +20,6 @@ from .escape_verdict import (
 )
 from .level_checks import covered
 from .verdict import outputs_between
-
-WITHIN = 1e-3
-"""Relative error of x_e that is allowed where nothing else is asked."""
 
 _LEFT_OUT = {
     "H I": "collisions, lines above lyman_lines, two-photon decay above highest_two_photon_n",

@@ -4,13 +4,17 @@ from __future__ import annotations
 
 import tomllib
 from dataclasses import dataclass
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 from ..arrays import FloatArray, IntArray, frozen_array
 from ..errors import Outcome
 from ..history.result import Channels, RadiationField
 from ..history.setup import Setup
+from ..markup import html_table
 from .level_records import Question
+
+if TYPE_CHECKING:
+    import xarray
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -194,6 +198,37 @@ class EscapeStudy:
         from .escape_notes import escape_notes
 
         return escape_notes(self)
+
+    def to_xarray(self) -> xarray.Dataset:
+        """Every variant over redshift (needs the xarray extra)."""
+        import xarray
+
+        variants = self.variants
+        arrays: dict[str, Any] = {
+            "free_electron_fraction": (("variant", "redshift"), variants.free_electron_fraction),
+            "matter_temperature_k": (("variant", "redshift"), variants.matter_temperature_k),
+            "observable": (("variant", "observable_name"), variants.observable),
+        }
+        coordinates: dict[str, Any] = {
+            "variant": list(variants.name),
+            "redshift": self.redshift,
+            "observable_name": list(self.observable_names),
+        }
+        return xarray.Dataset(arrays, coords=coordinates)
+
+    def _repr_html_(self) -> str:
+        """Show how far each variant is off in a notebook."""
+        from .escape_notes import asked_range
+        from .escape_verdict import largest_difference
+
+        low, high = asked_range(self)
+        rows = []
+        for k, name in enumerate(self.variants.name):
+            if k != self.reference:
+                one = largest_difference(self, k, low, high)
+                rows.append((name, f"{100.0 * one.value:+.3g} %", f"{one.redshift:.0f}"))
+        caption = f"{repr(self)[1:-1]}; x_e off the reference at {low:g} <= z <= {high:g}"
+        return html_table(caption, ("variant", "largest", "at z"), rows)
 
     def __repr__(self) -> str:
         """One line: how many variants, and the outcome."""

@@ -10,13 +10,15 @@ from ..arrays import FloatArray
 from ..errors import Outcome, SolveError
 from ..history.course import state_at
 from ..history.helium_outputs import helium_channels
+from ..history.level_pieces import setup_key
 from ..history.outcome import outcome_of, relaxation_hubble
 from ..history.outputs import channels
 from ..history.result import Channels, RadiationField
 from ..history.setup import Setup
 from ..history.validity import steps_of
 from ..numerics.threads import one_blas_thread
-from ..pieces import Pieces
+from ..pieces import Pieces, code_digest
+from .record_pieces import recalled
 from .rung import integrate_observed, observed
 
 
@@ -92,6 +94,14 @@ def compute_variant(
     SolveError
         If the run ended before its last output.
     """
+    code = code_digest(("studies/rung", "studies/escape_run"))
+    key = setup_key(
+        "variant", job.setup, code, job.keeps, job.with_field, optical_depth_to, job.species
+    )
+    return recalled(pieces, key, VariantResult, lambda: _variant(job, pieces, optical_depth_to))
+
+
+def _variant(job: Job, pieces: Pieces | None, optical_depth_to: tuple[float, ...]) -> VariantResult:
     setup = job.setup
     with one_blas_thread():
         integrated = integrate_observed(setup, pieces, job.keeps)

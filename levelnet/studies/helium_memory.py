@@ -16,11 +16,18 @@ from ..arrays import FloatArray
 from ..escape.helium_past import HeliumPast
 from ..escape.helium_treatment import Seen
 from ..history.equations import ionized_and_neutral
-from ..history.helium import COLDEST_K, Around, HeliumEquations, HeliumFractions
+from ..history.helium import HeliumEquations, HeliumFractions
 from ..history.helium_explicit import Explicit, explicit_rates
+from ..history.ion_network import Around
 from ..history.local import Local
 from .frozen import FrozenHistory
-from .helium_response import Response, by_state, flow_response, red_response
+from .helium_response import (
+    Response,
+    by_state,
+    flow_response,
+    ion_flow_response,
+    red_response,
+)
 
 
 class HeliumStage(NamedTuple):
@@ -76,7 +83,7 @@ def helium_stages(history: FrozenHistory) -> list[HeliumStage | None]:
 
 
 def _stage(helium: HeliumEquations, around: Around, state: FloatArray) -> HeliumStage | None:
-    if around.radiation_temperature_k <= COLDEST_K:
+    if helium.held(around.radiation_temperature_k):
         return None
     x, seen = helium.fractions(state), helium.seen(around)
     first = helium.first_local(around, state)
@@ -84,7 +91,7 @@ def _stage(helium: HeliumEquations, around: Around, state: FloatArray) -> Helium
     if helium.second is not None:
         conditions = helium.second.conditions(around, x.double, x.single)
         solved.append(helium.second.solve(conditions))
-        found.append(flow_response(helium.second, solved[1], None))
+        found.append(ion_flow_response(helium.second, solved[1]))
     flows = np.zeros(2)
     flows[: len(solved)] = [one.solution.net_flow for one in solved]
     explicit = explicit_rates(helium, around, state, flows)

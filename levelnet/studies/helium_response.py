@@ -19,10 +19,10 @@ from ..background.parameters import (
     helium_derivatives,
     hydrogen_derivatives,
 )
-from ..escape.helium_lines import HeliumGroundLines
 from ..escape.helium_shares import line_shares
-from ..escape.helium_treatment import HeliumTreatment, Seen
-from ..history.helium import HeliumFractions, IonNetwork
+from ..escape.helium_treatment import Seen
+from ..history.helium import HeliumFractions
+from ..history.ion_network import HeliumIon, NeutralHelium
 from ..history.local import Local
 from ..network.gradient import (
     FlowGradient,
@@ -31,6 +31,7 @@ from ..network.gradient import (
     net_flow_gradient,
     times,
 )
+from ..network.reduced import KeptLevels
 
 
 class Slopes(NamedTuple):
@@ -80,18 +81,32 @@ class Response(NamedTuple):
     field: FloatArray
 
 
-def flow_response(network: IonNetwork, local: Local, seen: Seen | None) -> Response:
-    """Of the net flow to the ground state; `seen` of He I alone."""
+def flow_response(network: NeutralHelium, local: Local, seen: Seen) -> Response:
+    """Of the net flow to the ground state of He I."""
     gradient = net_flow_gradient(local.rates, local.coupling, local.solution)
     return _response(network, local, seen, gradient)
 
 
-def _response(
-    network: IonNetwork, local: Local, seen: Seen | None, gradient: FlowGradient
-) -> Response:
-    kept, coupling, conditions = network.reduced.kept, local.coupling, local.conditions
-    s = flow_slopes(kept, local.rates, coupling, conditions, gradient)
-    slopes = Slopes(
+def ion_flow_response(network: HeliumIon, local: Local) -> Response:
+    """Of the net flow to the ground state of He II; of its line by the escape alone."""
+    gradient = net_flow_gradient(local.rates, local.coupling, local.solution)
+    nothing = np.zeros(len(network.lines.names))
+    return Response(
+        gradient,
+        _slopes(network.reduced.kept, local, gradient),
+        float(gradient.channel[network.decay]),
+        nothing,
+        gradient.channel[network.lines.upper],
+        nothing,
+        0.0,
+        nothing,
+    )
+
+
+def _slopes(kept: KeptLevels, local: Local, gradient: FlowGradient) -> Slopes:
+    """Slopes by the surroundings but for the lines of He I, which see more than the ion."""
+    s = flow_slopes(kept, local.rates, local.coupling, local.conditions, gradient)
+    return Slopes(
         s.ln_radiation_temperature,
         s.ln_matter_temperature,
         s.ln_hydrogen_density,
@@ -101,14 +116,12 @@ def _response(
         s.ln_ionized_fraction,
         s.ln_ground_fraction,
     )
-    two_photon = float(gradient.channel[network.decay])
-    upper, nothing = network.lines.upper, np.zeros(len(network.lines.names))
-    treatment, lines = network.treatment, network.lines
-    if not isinstance(treatment, HeliumTreatment) or seen is None:
-        escape = gradient.channel[upper]
-        return Response(gradient, slopes, two_photon, nothing, escape, nothing, 0.0, nothing)
-    assert isinstance(lines, HeliumGroundLines)
-    share = line_shares(treatment, lines, kept, conditions, seen, network.escape_factor)
+
+
+def _response(network: NeutralHelium, local: Local, seen: Seen, gradient: FlowGradient) -> Response:
+    kept, lines, conditions = network.reduced.kept, network.lines, local.conditions
+    upper = lines.upper
+    share = line_shares(network.treatment, lines, kept, conditions, seen, network.escape_factor)
     by_loss, by_excess = gradient.loss[upper, upper], gradient.excess[upper]
     by_field = by_excess * share.excess_by_field
     by_depth = float(by_excess @ share.excess_by_depth)
@@ -120,14 +133,14 @@ def _response(
     escape = by_loss * share.loss + by_excess * share.excess
     return Response(
         gradient,
-        slopes.plus(
+        _slopes(kept, local, gradient).plus(
             # Lifts go as the Boltzmann population of the term.
             radiation_temperature=float(by_excess @ (share.excess * excited)),
             helium_density=by_depth,
             hubble_rate=-by_depth - absorption,
             neutral_hydrogen=absorption,
         ),
-        two_photon,
+        float(gradient.channel[network.decay]),
         escape + by_loss * thick + by_excess * share.excess_by_depth,
         escape,
         by_loss * share.loss_by_other_decays,
@@ -136,7 +149,7 @@ def _response(
     )
 
 
-def red_response(network: IonNetwork, local: Local, seen: Seen, line: int) -> Response:
+def red_response(network: NeutralHelium, local: Local, seen: Seen, line: int) -> Response:
     """Of ln of the distortion on the red side of one line of He I.
 
     See :func:`levelnet.escape.blue_side.log_red_side`.

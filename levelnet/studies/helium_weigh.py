@@ -118,9 +118,7 @@ def weigh_helium(
 def _atom(history: FrozenHistory) -> tuple[HeliumLadders, HeliumGroundLines]:
     atoms = history.integrated.helium
     assert atoms is not None
-    lines = atoms.equations.first.lines
-    assert isinstance(lines, HeliumGroundLines)
-    return atoms.first, lines
+    return atoms.first, atoms.equations.first.lines
 
 
 def _points(along: _Along, ion: int) -> _Points:

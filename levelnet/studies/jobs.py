@@ -2,12 +2,24 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterator, Sequence
-from concurrent.futures import BrokenExecutor, Executor, Future, as_completed
+from collections.abc import Callable, Generator, Iterator, Sequence
+from concurrent.futures import (
+    FIRST_COMPLETED,
+    BrokenExecutor,
+    Executor,
+    Future,
+    as_completed,
+    wait,
+)
 from typing import TypeVar
 
+from ..distilled.nodes import process_pool
 from ..errors import SolveError
 from ..history.integrate import Progress
+
+# Jobs handed out at once, so that waiting for any of them stays cheap.
+_MOST_WAITING = 1024
+_ATTEMPTS = 2
 
 Job = TypeVar("Job")
 Result = TypeVar("Result")
@@ -77,3 +89,88 @@ def _computed(
     finally:
         for future in futures:
             future.cancel()
+
+
+def run_each(
+    jobs: Sequence[Job],
+    costs: Sequence[float],
+    task: Callable[[Job], Result],
+    executor: Executor | None,
+    workers: int = 1,
+) -> Iterator[tuple[int, Result | Exception]]:
+    """Give every job's result, or what it failed with, as they come; no failure stops the rest.
+
+    Parameters
+    ----------
+    jobs, costs, task, executor
+        As for :func:`run_jobs`.
+    workers : int, at least 1
+        Processes of the pool that takes the place of one that broke. Whatever ran in a pool when it
+        broke a second time is run once more, each in a process of its own, so that a job that kills
+        its process is known by name.
+
+    Yields
+    ------
+    tuple of int and result or Exception
+        Position of the job, and what came of it.
+    """
+    left = dict.fromkeys(sorted(range(len(jobs)), key=lambda k: -costs[k]))
+    if executor is None:
+        for k in left:
+            yield k, _tried(task, jobs[k])
+        return
+    yield from _through(executor, jobs, task, left, _MOST_WAITING)
+    while left:
+        with process_pool(workers) as pool:
+            suspects = yield from _through(pool, jobs, task, left, workers)
+        for k in suspects or list(left)[:1] * bool(left):
+            del left[k]
+            yield k, _alone(task, jobs[k])
+
+
+def _through(
+    executor: Executor,
+    jobs: Sequence[Job],
+    task: Callable[[Job], Result],
+    left: dict[int, None],
+    most: int,
+) -> Generator[tuple[int, Result | Exception], None, list[int]]:
+    """Run what is `left` and strike it off; if the pool breaks, return what ran in it then."""
+    running: dict[Future[Result], int] = {}
+    waiting, suspects, broken = iter(list(left)), list[int](), False
+    try:
+        while True:
+            while not broken and len(running) < most and (k := next(waiting, None)) is not None:
+                try:
+                    running[executor.submit(task, jobs[k])] = k
+                except BrokenExecutor:
+                    broken = True
+            if not running:
+                return suspects
+            for future in wait(running, return_when=FIRST_COMPLETED).done:
+                k, found = running.pop(future), _tried(Future.result, future)
+                if isinstance(found, BrokenExecutor):
+                    broken = True
+                    suspects.append(k)
+                    continue
+                del left[k]
+                yield k, found
+    finally:
+        for future in running:
+            future.cancel()
+
+
+def _tried(task: Callable[[Job], Result], job: Job) -> Result | Exception:
+    try:
+        return task(job)
+    except Exception as error:
+        return error
+
+
+def _alone(task: Callable[[Job], Result], job: Job) -> Result | Exception:
+    for _ in range(_ATTEMPTS):
+        with process_pool(1) as pool:
+            found = _tried(lambda one: pool.submit(task, one).result(), job)
+        if not isinstance(found, BrokenExecutor):
+            return found
+    return SolveError(f"its worker process died {_ATTEMPTS} times; is memory short?")

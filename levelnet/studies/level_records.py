@@ -3,14 +3,20 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
 from ..arrays import FloatArray, IntArray, frozen_array
 from ..errors import Outcome
+from ..history.samples import sample_rows
 from ..history.setup import Setup
+from ..markup import html_table
 from .convergence import LARGEST_STEP, SHORTEST_LADDER
 from .helium_ladder import Atom
+
+if TYPE_CHECKING:
+    import xarray
 
 # Outputs that end above it leave too many electrons out of the optical depth: z_* of the demo with
 # n_max = 8 is 0.08 % too high with an end at 400, and 0.5 % with one at 800.
@@ -237,6 +243,33 @@ class LevelStudy:
     def notes(self) -> tuple[str, ...]:
         """What a user must know before relying on the result."""
         return level_notes(self)
+
+    def to_xarray(self) -> xarray.Dataset:
+        """Rungs and limit of x_e and T_m over n_max and redshift (needs the xarray extra)."""
+        import xarray
+
+        arrays: dict[str, Any] = {}
+        for name in ("free_electron_fraction", "matter_temperature_k"):
+            limit: Estimate = getattr(self.limit, name)
+            arrays[name] = (("n_max", "redshift"), getattr(self.rungs, name))
+            arrays[f"{name}_limit"] = ("redshift", limit.value)
+            arrays[f"{name}_limit_relative_error"] = ("redshift", limit.relative_error)
+        arrays["observable"] = (("n_max", "observable_name"), self.rungs.observable)
+        coordinates: dict[str, Any] = {
+            "n_max": self.rungs.n_max,
+            "redshift": self.redshift,
+            "observable_name": list(self.observable_names),
+        }
+        return xarray.Dataset(arrays, coords=coordinates)
+
+    def _repr_html_(self) -> str:
+        """Show x_e carried to all levels in a notebook."""
+        limit = self.limit.free_electron_fraction
+        rows = (
+            (f"{self.redshift[k]:.1f}", f"{limit.value[k]:.7g}", f"{limit.relative_error[k]:.1e}")
+            for k in sample_rows(self.redshift, self.atom)
+        )
+        return html_table(repr(self)[1:-1], ("z", "x_e, all levels", "error bar"), rows)
 
     def __repr__(self) -> str:
         """One line: the rungs and the outcome."""

@@ -32,7 +32,7 @@ _COARSER = 10.0
 _ROUNDING = 1e-15  # of a logarithm near zero, a few units in the last place
 _RATIO = 2.0**0.5
 _MOST_HELD_OUT = 2
-_POPULATION_REDSHIFTS = 12
+POPULATION_REDSHIFTS = 12
 
 
 def level_study(  # noqa: PLR0913  choices by name, each with a default
@@ -106,10 +106,7 @@ def level_study(  # noqa: PLR0913  choices by name, each with a default
     shells = tuple(resolve)
     check_ladder(setup, ladder, shells, atom)
     setup = study_setup(setup, also_at)
-    relative = min(setup.accuracy.relative, _RELATIVE)
-    jobs = [rung_setup(setup, n, None, relative, atom) for n in ladder]
-    jobs += [rung_setup(setup, ladder[-1], top, relative) for top in shells]
-    coarse = [rung_setup(setup, n, None, _COARSER * relative, atom) for n in ladder[:2]]
+    jobs, coarse = ladder_jobs(setup, ladder, shells, atom)
     check_memory(jobs[len(ladder) - 1], workers)
     places = _population_redshifts(output_redshifts(setup))
     task = partial(
@@ -119,9 +116,19 @@ def level_study(  # noqa: PLR0913  choices by name, each with a default
         optical_depth_to=tuple(optical_depth_to),
     )
     every = [*jobs, *coarse]
-    costs = [estimate(one).seconds for one in every]
+    costs = [estimate(one, POPULATION_REDSHIFTS).seconds for one in every]
     results = run_jobs(every, costs, task, executor, progress, "rungs")
     return _assemble(jobs, len(ladder), results, places, atom)
+
+
+def ladder_jobs(
+    setup: Setup, ladder: Sequence[int], shells: Sequence[int], atom: Atom = "hydrogen"
+) -> tuple[list[Setup], list[Setup]]:
+    """Setups of all rungs, those with whole shells last, and of the shortest less accurately."""
+    relative = min(setup.accuracy.relative, _RELATIVE)
+    jobs = [rung_setup(setup, n, None, relative, atom) for n in ladder]
+    jobs += [rung_setup(setup, ladder[-1], top, relative) for top in shells]
+    return jobs, [rung_setup(setup, n, None, _COARSER * relative, atom) for n in ladder[:2]]
 
 
 def default_rungs(n_max: int) -> tuple[int, ...]:
@@ -175,7 +182,7 @@ def check_ladder(
 
 def _population_redshifts(redshift: FloatArray) -> tuple[float, ...]:
     """A dozen output redshifts, evenly spread over the outputs."""
-    chosen = np.linspace(0, len(redshift) - 1, min(_POPULATION_REDSHIFTS, len(redshift)))
+    chosen = np.linspace(0, len(redshift) - 1, min(POPULATION_REDSHIFTS, len(redshift)))
     return tuple(redshift[np.unique(chosen.astype(int))].tolist())
 
 

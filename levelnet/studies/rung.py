@@ -25,13 +25,15 @@ from ..background.quadrature import quadrature
 from ..errors import Outcome, SolveError
 from ..history.course import electron_fraction_at, state_at
 from ..history.integrate import Integrated, integrate_history, output_redshifts
+from ..history.level_pieces import setup_key
 from ..history.outcome import outcome_of, relaxation_hubble
 from ..history.outputs import solve_levels
 from ..history.setup import Setup
 from ..network.assembly import Workspace
 from ..numerics.threads import one_blas_thread
-from ..pieces import Pieces
+from ..pieces import Pieces, code_digest
 from .helium_ladder import Atom, with_n_max
+from .record_pieces import recalled
 
 LOW_N = 4
 """Levels up to this n have their populations recorded."""
@@ -136,7 +138,25 @@ def compute_rung(
     ------
     SolveError
         If the run ended before its last output.
+
+    Notes
+    -----
+    A finished rung is among the pieces, so that a ladder that was killed does not run it again.
     """
+    key = setup_key(
+        "rung", setup, code_digest(("studies/rung",)), population_redshift, optical_depth_to
+    )
+    return recalled(
+        pieces, key, RungResult, lambda: _rung(setup, population_redshift, pieces, optical_depth_to)
+    )
+
+
+def _rung(
+    setup: Setup,
+    population_redshift: tuple[float, ...],
+    pieces: Pieces | None,
+    optical_depth_to: tuple[float, ...],
+) -> RungResult:
     with one_blas_thread():
         integrated = integrate_observed(setup, pieces)
         if not integrated.trajectory.outcome.ok:

@@ -42,6 +42,7 @@ from .helium_weighing import over
 from .scalars import Scalars, scalars_of
 from .sensitivity import StageRates, hydrogen_results, line_parameters, stage_rates, stages
 from .targets import Target, parse_target
+from .weigh_pieces import KeptWeights
 from .weighing import Weighing
 
 
@@ -122,7 +123,7 @@ def weigh(
         for target, value in zip(parsed, scalars.value.tolist(), strict=True):
             if not np.isfinite(value):
                 raise InputError(f"target {target.name}: the history does not reach it")
-        return _assemble(setup, history, parsed, scalars, tell)
+        return _assemble(setup, history, parsed, scalars, tell, pieces)
 
 
 def reach(
@@ -191,6 +192,7 @@ def _assemble(
     targets: Sequence[Target],
     scalars: Scalars,
     tell: Progress,
+    pieces: Pieces | None,
 ) -> Weighing:
     ladder = history.integrated.ladder
     flat, helium = _adjoint(history, scalars, tell)
@@ -198,7 +200,7 @@ def _assemble(
     direct = _direct(history, scalars, flat, rates)
     if helium is not None:
         direct.parameter[...] += helium.parameter
-    by_rate = _by_rates(history, scalars, flat[:, :, 0], rates.scale, tell)
+    by_rate = _by_rates(history, scalars, flat[:, :, 0], rates.scale, tell, pieces)
     found = transitions(ladder)
     value = scalars.value
     names, places, by_log = _parameters(history)
@@ -268,6 +270,7 @@ def _by_rates(
     weight: FloatArray,
     scale: FloatArray,
     tell: Progress,
+    pieces: Pieces | None,
 ) -> NodeWeights:
     """DJ by the ln of every line strength and cross section; `scale` is that of the stages."""
     here = stages(history)
@@ -284,9 +287,11 @@ def _by_rates(
     )
     pairs, work = exchange_pairs(ladder), Workspace.of(ladder)
     temperatures = sources[0].temperature_k.tolist()
+    kept = KeptWeights(pieces, history.setup, sources[0].temperature_k, by_result, total)
     for count, temperature_k in enumerate(temperatures):
-        if np.any(by_result[count]):
+        if count >= kept.done and np.any(by_result[count]):
             add_node_weights(ladder, pairs, temperature_k, by_result[count], total, work)
+            kept.note(count + 1)
         tell("weighing rates", (count + 1) / len(temperatures))
     for line in scalars.lines:
         if line.ends is not None:

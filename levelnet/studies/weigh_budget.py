@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import dataclasses
+import itertools
 from collections.abc import Sequence
 
 import numpy as np
@@ -47,10 +48,9 @@ def weigh_with_budget(
         Of `targets`, with the budget of `targets` and `band`.
     """
     further = [name for name in band if name not in targets]
-    most = max(1, int(_SHARE * available_memory_bytes() / engine.bytes_per_target(setup)))
-    first = max(0, most - len(targets))
-    parts = [[*targets, *further[:first]]]
-    parts += [further[k : k + most] for k in range(first, len(further), most)]
+    sizes = parts_of(setup, len(targets), len(further))
+    left = iter([*targets, *further])
+    parts = [list(itertools.islice(left, size)) for size in sizes]
     kept: Weighing | None = None
     budgets: list[ErrorBudget] = []
     for part in parts:
@@ -60,6 +60,13 @@ def weigh_with_budget(
     assert kept is not None
     notes = (*kept.notes, *budget_notes(setup, uncertainties))
     return dataclasses.replace(kept, budget=joined(budgets), notes=notes)
+
+
+def parts_of(setup: Setup, n_targets: int, n_further: int) -> list[int]:
+    """Sizes of the parts in which derivatives are made: all targets first, then what fits."""
+    most = max(1, int(_SHARE * available_memory_bytes() / engine.bytes_per_target(setup)))
+    first = min(n_further, max(0, most - n_targets))
+    return [n_targets + first, *(min(most, n_further - k) for k in range(first, n_further, most))]
 
 
 def budget_notes(setup: Setup, uncertainties: Sequence[Uncertainty]) -> tuple[str, ...]:

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, replace
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
@@ -10,9 +11,13 @@ from ..arrays import FloatArray, IntArray, frozen_array
 from ..atomic.levels import LevelSet
 from ..errors import InputError, Outcome
 from ..history.setup import Setup
+from ..markup import html_table
 from .budget_record import ErrorBudget
 from .helium_weighing import HeliumWeights, IonWeights, first_of
 from .targets import parse_target
+
+if TYPE_CHECKING:
+    import xarray
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -105,6 +110,42 @@ class Weighing:
         if name not in self.targets:
             raise InputError(f'target "{target}": weighed were {", ".join(self.targets)}')
         return self.targets.index(name)
+
+    def to_xarray(self) -> xarray.Dataset:
+        """Derivatives over target and level, line or parameter (needs the xarray extra).
+
+        Those by single transitions, `bound_bound`, stay out: n_max^3/3 numbers for each target.
+        """
+        import xarray
+
+        levels = self.levels
+        arrays: dict[str, Any] = {
+            "value": ("target", self.value),
+            "two_photon": ("target", self.two_photon),
+            "compton": ("target", self.compton),
+            "bound_free": (("target", "level"), self.bound_free),
+            "escape": (("target", "line"), self.escape),
+            "cosmology": (("target", "parameter"), self.parameter),
+        }
+        coordinates: dict[str, Any] = {
+            "target": list(self.targets),
+            "line": list(self.lines),
+            "parameter": list(self.parameters),
+            "n": ("level", levels.n),
+            "l": ("level", levels.l),
+        }
+        return xarray.Dataset(arrays, coords=coordinates)
+
+    def _repr_html_(self) -> str:
+        """Show the targets and what they hang on most in a notebook."""
+        rows = []
+        for target, unit, value in zip(self.targets, self.units, self.value, strict=True):
+            weights = self.processes(target)
+            most = max(weights, key=lambda name: abs(weights[name]))
+            shown = f"{value:.7g} {'' if unit == '1' else unit}".rstrip()
+            rows.append((target, shown, f"{most} {weights[most]:+.3g}"))
+        head = ("target J", "value", "largest d ln J / d ln R")
+        return html_table(f"Weighing: {self.outcome.value}", head, rows)
 
     def first(self, count: int) -> Weighing:
         """The same for the first `count` targets alone."""

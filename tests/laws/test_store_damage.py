@@ -1,15 +1,13 @@
 """Damaged and hostile files: one clear line, never a wrong number, never a crash of HDF5.
 
 Damage by accident breaks the seal, so that HDF5 never sees it. Files made to harm carry a right
-seal here, so that every later check is met too.
+seal here, so that every later check is met too. `test_fuzz_files.py` does both by the thousand.
 """
 
 from __future__ import annotations
 
 import dataclasses
-import os
 import re
-import subprocess
 import sys
 from collections.abc import Callable
 from pathlib import Path
@@ -21,14 +19,16 @@ import pytest
 from hypothesis import example, given
 from hypothesis import strategies as st
 
+from levelnet.cli.main import main
 from levelnet.errors import FileFormatError
 from levelnet.store import layout, read, write
 from levelnet.store.digest import content_digest, seal
 from levelnet.store.read import read_content
 from levelnet.store.schema import Content, Stored
 from tests.invented_history import history_with_field, invented_history
+from tests.invented_weighing import invented_weighing
+from tests.small_tables import small_table
 
-ROOT = Path(__file__).resolve().parents[2]
 WRITE = sys.modules[write.__module__]  # its name in the package is that of the function
 SEAL_LENGTH = 82  # a line feed, "levelnet sha256 ", 64 digits, a line feed
 
@@ -79,107 +79,6 @@ def test_any_cut_is_found(place: float, whole: bytes, folder: Path) -> None:
 def test_bytes_added_at_the_end_are_found(extra: bytes, whole: bytes, folder: Path) -> None:
     (folder / "longer.h5").write_bytes(whole + extra)
     refusal(folder / "longer.h5")
-
-
-FUZZ = """
-import random, sys
-from pathlib import Path
-from levelnet.errors import FileFormatError
-from levelnet.store import read
-
-whole, path = Path(sys.argv[1]).read_bytes(), Path(sys.argv[2])
-random.seed(1)
-for case in range(int(sys.argv[3])):
-    data = bytearray(whole)
-    start = random.randrange(len(data))
-    kind = case % 4
-    if kind == 0:
-        for _ in range(20):
-            data[random.randrange(len(data))] ^= 1 << random.randrange(8)
-    elif kind == 1:
-        data[start : start + 8] = random.randbytes(8)
-    elif kind == 2:
-        data[start : start + 512] = bytes(512)
-    else:
-        del data[start : start + 1 + random.randrange(4096)]
-    if data == whole:
-        continue
-    path.write_bytes(data)
-    try:
-        read(path)
-    except FileFormatError as error:
-        message = str(error)
-        assert message.startswith(f"{path}: ") and message.isprintable(), message
-    else:
-        raise AssertionError(f"case {case} was read")
-print("done")
-"""
-
-
-def run_python(program: str, *arguments: object) -> subprocess.CompletedProcess[str]:
-    """In a process of its own, since HDF5 can take its process with it."""
-    paths = [str(ROOT), *os.environ.get("PYTHONPATH", "").split(os.pathsep)]
-    return subprocess.run(
-        [sys.executable, "-c", program, *map(str, arguments)],
-        env=os.environ | {"PYTHONPATH": os.pathsep.join(paths)},
-        capture_output=True, text=True, timeout=300, check=False,
-    )  # fmt: skip
-
-
-def test_heavy_damage_never_ends_the_process(whole: bytes, folder: Path) -> None:
-    done = run_python(FUZZ, folder / "whole.h5", folder / "fuzz.h5", 2000)
-    assert (done.returncode, done.stdout) == (0, "done\n"), done.stderr
-
-
-SEALED_FUZZ = """
-import os, random, resource, sys
-from pathlib import Path
-from levelnet.errors import FileFormatError
-from levelnet.store import read
-from levelnet.store.digest import seal
-from levelnet.store.read import read_content
-
-source, path = Path(sys.argv[1]), Path(sys.argv[2])
-whole, digest = source.read_bytes()[:-82], read_content(source).attributes["digest"]
-used = [place for place, byte in enumerate(whole) if byte]
-random.seed(2)
-found = {"refused": 0, "same": 0, "ended": 0}
-for case in range(int(sys.argv[3])):
-    data = bytearray(whole)
-    place = random.choice(used)
-    data[place] ^= 1 << random.randrange(8)
-    path.write_bytes(data)
-    with open(path, "r+b") as raw:
-        seal(raw)
-    child = os.fork()
-    if child == 0:
-        os.dup2(os.open(os.devnull, os.O_WRONLY), 2)
-        resource.setrlimit(resource.RLIMIT_CORE, (0, 0))
-        resource.setrlimit(resource.RLIMIT_CPU, (10, 10))
-        resource.setrlimit(resource.RLIMIT_AS, (4 << 30, 4 << 30))
-        try:
-            right = read_content(path).attributes["digest"] == digest
-            os._exit(0 if right else 3)
-        except FileFormatError as error:
-            os._exit(1 if str(error).isprintable() else 4)
-        except BaseException:
-            os._exit(5)
-    status = os.waitstatus_to_exitcode(os.waitpid(child, 0)[1])
-    assert status <= 1, f"case {case}, byte {place}: {status}"
-    found["ended" if status < 0 else ["same", "refused"][status]] += 1
-print(found["refused"], found["same"], found["ended"])
-"""
-
-
-@pytest.mark.slow
-def test_damage_under_a_right_seal_is_never_believed(whole: bytes, folder: Path) -> None:
-    """Each flip hits a byte in use. HDF5 may end the process; a wrong number may not come out."""
-    done = run_python(SEALED_FUZZ, folder / "whole.h5", folder / "sealed.h5", 300)
-    assert done.returncode == 0, done.stderr
-    refused, same, ended = map(int, done.stdout.split())
-    # Some bytes say nothing of the content (free space, limits, counts): the same content is right.
-    assert refused > 100
-    assert ended < 0.02 * (refused + same + ended)
 
 
 # ---- the digest covers everything
@@ -475,6 +374,8 @@ def save_with_right_digest(content: Content, path: Path) -> None:
         ("setup", "not TOML at all =", "stored setup: not valid TOML"),
         ("setup", "[cosmology]\n", "stored setup: "),
         ("setup", "", "stored setup: "),
+        ("setup", '[rates]\noverrides = "/etc/passwd"\n', "rates.overrides: names a file"),
+        ("setup", '[cosmology]\nexpansion_table = "x"\n', "expansion_table: names a file"),
     ],
 )
 def test_attribute_of_no_meaning(name: str, value: str, reason: str, folder: Path) -> None:
@@ -512,3 +413,34 @@ def test_records_must_fit_together(folder: Path) -> None:
             content.variables[path] = other.variables[path]
     save_with_right_digest(content, folder / "fit.h5")
     assert "redshift of group lines differs" in refusal(folder / "fit.h5")
+
+
+@pytest.mark.parametrize(
+    ("make", "path", "value", "reason"),
+    [
+        (small_table, "pairs/lower", -(2**63), "lower: names levels that are not in the file"),
+        (small_table, "pairs/upper", 99, "upper: names levels that are not in the file"),
+        (invented_weighing, "weighing/line_upper", -1, "line_upper: names levels that are not"),
+    ],
+)
+def test_positions_must_be_those_of_levels(
+    make: Callable[[], Any], path: str, value: int, reason: str, folder: Path
+) -> None:
+    content = WRITE.content_of(make())
+    path = next(one for one in content.variables if one.endswith(path.split("/")[1]))
+    stored: Any = content.variables[path]
+    numbers = np.full_like(stored.values, value)
+    content.variables[path] = dataclasses.replace(stored, values=numbers)
+    save_with_right_digest(content, folder / "positions.h5")
+    assert reason in refusal(folder / "positions.h5")
+
+
+def test_what_a_terminal_could_obey_is_shown_and_not_sent(
+    folder: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    notes = ("\x1b]0;owned\x07\x1b[2J", "\u202egpj.exe")
+    write(dataclasses.replace(invented_history(), notes=notes), folder / "notes.h5")
+    assert main(["show", str(folder / "notes.h5")]) == 0
+    out = capsys.readouterr().out
+    assert "\\x1b]0;owned\\x07" in out
+    assert all(letter.isprintable() or letter == "\n" for letter in out)

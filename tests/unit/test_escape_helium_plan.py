@@ -96,7 +96,7 @@ def test_both_atoms_are_compared_where_both_recombine() -> None:
 
 
 def test_what_makes_no_sense_is_refused() -> None:
-    with pytest.raises(InputError, match=r"helium\.n_max = 0: helium is inert and has no lines"):
+    with pytest.raises(InputError, match=r"helium\.n_max = 0: helium has no lines to compare"):
         helium_plan(small_setup(5))
     with pytest.raises(InputError, match="diffusion comes with wings, so after it"):
         plan(("intercombination", "continuum", "diffusion", "wings", "feedback", "higher_lines"))

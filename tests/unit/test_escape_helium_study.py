@@ -5,61 +5,21 @@ Its curves are invented, so that answers can be read off; real ones cost minutes
 
 from __future__ import annotations
 
-import dataclasses
 import json
-from functools import lru_cache
 from pathlib import Path
 
-import numpy as np
 import pytest
 
 import levelnet
 from levelnet.cli.escape import study_text, study_values
 from levelnet.cli.output import _plain
-from levelnet.history.result import Channels
 from levelnet.report.escape import check_escape_figures, escape_channel_figure, treatment_figure
-from levelnet.studies import escape
-from levelnet.studies.escape_helium_plan import HELIUM_SWITCHES, helium_plan
+from levelnet.studies.escape_helium_plan import HELIUM_SWITCHES
 from levelnet.studies.escape_records import EscapeStudy
-from levelnet.studies.escape_run import VariantResult
 from levelnet.studies.escape_verdict import safe_ranges
 from levelnet.studies.level_records import Question
-from tests.invented_escape import cheap_study
+from tests.invented_escape import both, helium_study
 from tests.same_records import assert_same
-
-NAMES = ("2 1S-1 1S", "2 1P-1 1S")
-
-
-@lru_cache(maxsize=1)
-def helium_study() -> EscapeStudy:
-    """Variant k is off by k times 1e-4 at z above 1000, and not at all below."""
-    outer = cheap_study()
-    setup = dataclasses.replace(
-        outer.setup, helium=dataclasses.replace(outer.setup.helium, n_max=3)
-    )
-    plan, high = helium_plan(setup), outer.redshift > 1000.0
-    x_e = outer.variants.free_electron_fraction[outer.reference]
-    share = np.tile([0.3, 0.7], (len(x_e), 1))
-    results = [
-        VariantResult(
-            x_e * (1.0 + 1e-4 * ((k - plan.reference) % len(plan.variants)) * high),
-            outer.variants.matter_temperature_k[outer.reference],
-            outer.observable_names,
-            outer.observable_units,
-            outer.variants.observable[outer.reference],
-            Channels(NAMES, 1e-15 * share, share, share),
-            None,
-            outer.outcome,
-        )
-        for k in range(len(plan.variants))
-    ]
-    return escape._assemble(setup, plan, results)
-
-
-def both(question: Question | None = None) -> EscapeStudy:
-    inner = dataclasses.replace(helium_study(), question=question)
-    setup = dataclasses.replace(cheap_study().setup, helium=inner.setup.helium)
-    return dataclasses.replace(cheap_study(), setup=setup, helium=inner)
 
 
 @pytest.mark.parametrize("question", [None, Question(1e-3, 900.0, 1500.0)])

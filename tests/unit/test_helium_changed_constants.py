@@ -25,8 +25,8 @@ from levelnet.atomic.two_photon import stimulated_two_photon_factor, two_photon_
 from levelnet.background.conditions import Conditions
 from levelnet.escape.helium_lines import helium_ground_lines
 from levelnet.escape.helium_treatment import Seen
-from levelnet.history.helium import Around
 from levelnet.history.helium_atom import HeliumAtoms, build_helium
+from levelnet.history.ion_network import Around
 from levelnet.network.assembly import Workspace, factor_interior
 from levelnet.network.helium_populations import helium_populations
 from levelnet.network.populations import populations

@@ -146,7 +146,7 @@ def test_longer_rung_lies_inside_the_bar(coarser: None) -> None:
 @pytest.mark.slow
 def test_verdict_and_file(coarser: None, tmp_path: Path) -> None:
     from levelnet.cli.level_output import level_summary
-    from levelnet.cli.levels import judged
+    from levelnet.studies.answers import level_answer
     from levelnet.studies.verdict import verdict
 
     study = helium_study()
@@ -156,7 +156,7 @@ def test_verdict_and_file(coarser: None, tmp_path: Path) -> None:
     said = level_summary(study, found)
     assert "for 0.002 % in x_e at 1600 < z < 3500: helium n_max = " in said
     assert "the ladder is that of helium; hydrogen has n_max = 4 on every rung" in said
-    usual, _ = judged(study)
+    usual, _ = level_answer(study)
     assert (usual.low, usual.high) == (1600.0, 3500.0)
     levelnet.write(study, tmp_path / "he.h5")
     again = levelnet.read(tmp_path / "he.h5")

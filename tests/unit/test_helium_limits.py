@@ -57,8 +57,21 @@ def test_errors_obey_their_equation() -> None:
     assert np.all(found[1:] < 0.0)
 
 
+def test_outputs_that_begin_too_late_estimate_nothing_and_say_so() -> None:
+    # He I makes up 2 per cent at a = 3.9.
+    redshift, settling = np.array([2500.0, 2000.0, 1600.0]), np.zeros(3)
+    flow = np.full((3, 1), 1e-2)
+    early, late = (np.array([first, 0.0, -4.0]) for first in (4.0, 3.8))
+    assert np.isfinite(electron_errors(redshift, moments(early, settling), RATIO, flow)).all()
+    assert np.isnan(electron_errors(redshift, moments(late, settling), RATIO, flow)).all()
+    grid = {"redshift_start": 1800.0, "redshift_end": 1500.0, "n_redshifts": 4}
+    history = levelnet.solve(helium_setup(n_max=3, grid=grid))
+    assert any("the outputs begin after He I has begun to recombine" in n for n in history.notes)
+    assert not any("escape_change" in note for note in history.notes)
+
+
 def test_nan_where_helium_is_held() -> None:
-    redshift, a = np.array([2000.0, 1000.0, 400.0]), np.array([0.0, -5.0, -9.0])
+    redshift, a = np.array([2000.0, 1000.0, 400.0]), np.array([5.0, -5.0, -9.0])
     flow = np.array([[0.1], [0.1], [np.nan]])
     found = electron_errors(redshift, moments(a, np.zeros(3)), RATIO, flow)
     assert np.isfinite(found[:2]).all()

@@ -24,7 +24,8 @@ from levelnet.escape.helium_lines import (
     kept_terms,
 )
 from levelnet.escape.helium_treatment import HeliumSobolev, HeliumTreatment, Seen
-from levelnet.history.helium import COLDEST_K, Around, HeliumEquations, IonNetwork
+from levelnet.history.helium import COLDEST_K, HeliumEquations
+from levelnet.history.ion_network import Around, IonNetwork
 from levelnet.history.start import equilibrium_state, ion_lags, saha_state
 from levelnet.network.assembly import Workspace, factor_interior
 from levelnet.network.helium import helium_ladders, helium_rate_constants, reduce_helium

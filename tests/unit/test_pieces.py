@@ -1,11 +1,13 @@
 """Kept pieces: back bit for bit or not at all, whatever happens to files, folders and processes."""
 
+import io
 import logging
 import os
 import signal
 import subprocess
 import sys
 import time
+import zipfile
 from pathlib import Path
 
 import numpy as np
@@ -142,6 +144,45 @@ def test_file_of_another_key_is_absent(tmp_path):
     (two,) = set(tmp_path.iterdir()) - {one}
     one.replace(two)
     assert kept.get("two") is None
+
+
+def _archive(compression: int, **members: bytes) -> bytes:
+    buffer = io.BytesIO()
+    with zipfile.ZipFile(buffer, "w", compression) as archive:
+        for name, data in members.items():
+            archive.writestr(f"{name}.npy", data)
+    return buffer.getvalue()
+
+
+def _npy(array: np.ndarray, pickled: bool = False) -> bytes:
+    buffer = io.BytesIO()
+    np.save(buffer, array, allow_pickle=pickled)
+    return buffer.getvalue()
+
+
+def _declaring(shape: str) -> bytes:
+    return _npy(np.zeros(2)).replace(b"(2,), ", shape.encode().ljust(6))
+
+
+@pytest.mark.parametrize(
+    "content",
+    [
+        b"",
+        b"no archive",
+        _archive(zipfile.ZIP_DEFLATED, a=_npy(np.zeros(1_000_000))),
+        _archive(zipfile.ZIP_STORED, a=b"no array"),
+        _archive(zipfile.ZIP_STORED, a=_npy(np.array([{1}], object), pickled=True)),
+        _archive(zipfile.ZIP_STORED, a=_npy(np.zeros(3, "<f4"))),
+        _archive(zipfile.ZIP_STORED, a=_declaring("(9**9,)")),
+        _archive(zipfile.ZIP_STORED, a=_declaring("(9000,)")),
+    ],
+)
+def test_nonsense_under_a_right_checksum_is_absent(tmp_path, content):
+    """As another hand could put it there."""
+    folder = FolderPieces(tmp_path)
+    folder.put("k", {"a": np.zeros(2)})
+    _only_file(tmp_path).write_bytes(pieces._HEADER + pieces._checksum("k", content) + content)
+    assert folder.get("k") is None
 
 
 def test_folder_or_pipe_in_place_of_the_file_is_absent(tmp_path):

@@ -565,7 +565,7 @@ def refuse(path: Path) -> str:
 def test_what_is_no_file(tmp_path: Path) -> None:
     os.mkfifo(tmp_path / "pipe")  # opening it would wait for ever
     assert "No such file" in refuse(tmp_path / "missing.h5")
-    assert "not a plain file" in refuse(tmp_path)
+    assert "Is a directory" in refuse(tmp_path)
     assert "not a plain file" in refuse(tmp_path / "pipe")
 
 

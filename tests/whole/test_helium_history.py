@@ -19,7 +19,7 @@ from levelnet.history.run import solve
 from levelnet.history.setup import Setup
 from levelnet.report.departures import departure_map_figure
 from levelnet.store import layout
-from levelnet.store.hdf5 import load
+from levelnet.store.read import read_content
 from levelnet.studies.rung import observables_of
 from tests.same_records import assert_same
 from tests.small_helium import REDSHIFTS, helium_history, helium_setup
@@ -234,7 +234,7 @@ def test_comes_back_from_a_file(tmp_path: Path) -> None:
 def test_names_in_the_file(tmp_path: Path) -> None:
     # The names that programs outside rely on.
     levelnet.write(helium_history(), tmp_path / "helium.h5")
-    content = load(tmp_path / "helium.h5")
+    content = read_content(tmp_path / "helium.h5")
     for group in ("helium", "helium_ion"):
         names = {path.split("/")[1] for path in content.variables if path.startswith(f"{group}/")}
         wanted = {"n", "l", "statistical_weight", "energy", "population", "log_departure"}

@@ -19,9 +19,9 @@ import numpy as np
 import pytest
 
 import levelnet
-from levelnet.cli.levels import judged
 from levelnet.cli.main import main
 from levelnet.errors import InputError
+from levelnet.studies.answers import level_answer
 from levelnet.studies.level_records import LevelStudy, Question
 from tests.small_levels import small_study
 from tests.whole.test_command_line import GOOD, environment
@@ -159,14 +159,14 @@ def test_verdict_of_a_file_is_what_the_run_said() -> None:
     study = small_study()
 
     def ends(one: LevelStudy) -> tuple[float, float]:
-        found, met = judged(one)
+        found, met = level_answer(one)
         assert met is None
         return found.low, found.high
 
     assert ends(study) == (200.0, 1600.0)
     asked = dataclasses.replace(study, question=Question(1e-2, 900.0, 1000.0))
     assert ends(asked) == (900.0, 1000.0)
-    assert judged(asked)[0].within == 1e-2
+    assert level_answer(asked)[0].within == 1e-2
     early = dataclasses.replace(study, redshift=np.linspace(3000.0, 2600.0, len(study.redshift)))
     assert ends(early) == (2600.0, 3000.0)
 
@@ -175,13 +175,13 @@ def test_requirement_of_a_file_opens_no_other_file(tmp_path: Path) -> None:
     rows = ("[response]", 'file = "/etc/hostname"', "limit_sigma = 0.1")
     study = dataclasses.replace(small_study(), question=Question(1e-3, 200.0, 1600.0, rows))
     with pytest.raises(InputError, match="response"):
-        judged(study)
+        level_answer(study)
     rows = ("[observables]", '"x_e(900)" = 1e-3')
     study = dataclasses.replace(small_study(), question=Question(1e-3, 200.0, 1600.0, rows))
     levelnet.write(study, tmp_path / "study.h5")
     again = levelnet.read(tmp_path / "study.h5")
     assert again.question == study.question
-    assert judged(again) == judged(study)
+    assert level_answer(again) == level_answer(study)
 
 
 def test_interrupt_leaves_no_file(folder: Path) -> None:
