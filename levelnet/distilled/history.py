@@ -29,7 +29,7 @@ from ..kernels.effective import (
 from .fast import FastHistory, Sensitivities, fractions
 from .kept import check_helium, recombines
 from .observables import Observables, observe_electrons, observe_run, table_quadrature
-from .plasma import PlasmaRun, electrons_of, helium_of, run_plasma
+from .plasma import PlasmaRun, electrons_of, electrons_with, helium_of, run_plasma
 from .prepared import choose_physics, make_atom, rate_names, scale_factors
 from .table import EffectiveTable
 from .universe import CONSTANTS, make_drive, make_universe
@@ -203,11 +203,9 @@ def _with_helium(
         early = 1.0 + 2.0 * cosmology.helium_ratio()
         seen = observe_electrons(cosmology, grid, electrons, thomson, early)
     history = _assemble(cosmology, redshift, run, seen, None, left_out(lines))
-    return dataclasses.replace(
-        history,
-        free_electron_fraction=electrons_of(run.state, cosmology),
-        helium=helium_of(run.state),
-    )
+    helium = helium_of(run.state)
+    electrons = electrons_with(history.ionized_hydrogen_fraction, helium, cosmology)
+    return dataclasses.replace(history, free_electron_fraction=electrons, helium=helium)
 
 
 def _redshifts(table: EffectiveTable, asked: ArrayLike | None) -> FloatArray:

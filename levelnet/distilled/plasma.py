@@ -30,7 +30,7 @@ from .universe import make_universe
 
 # Local errors allowed in a step over the error asked, of u, v, a and b; with them x_e was measured
 # to 0.8 of what is asked.
-_LOCAL = np.array([2.0, 2.0, 20.0, 6.0])
+_LOCAL = np.array([2.0, 2.0, 60.0, 20.0])
 _FIRST_STEP, _MAX_STEPS = 1e-3, 20_000
 # T_r above which a start is not looked for, and below; at the first helium is doubly ionized in any
 # universe that the table admits.
@@ -144,7 +144,11 @@ def helium_of(state: FloatArray) -> FastHelium:
 
 def electrons_of(state: FloatArray, cosmology: Cosmology) -> FloatArray:
     """Give n_e/n_H of states."""
-    ionized, helium = fractions(state[:, 0])[0], helium_of(state)
+    return electrons_with(fractions(state[:, 0])[0], helium_of(state), cosmology)
+
+
+def electrons_with(ionized: FloatArray, helium: FastHelium, cosmology: Cosmology) -> FloatArray:
+    """Give n_e/n_H of fractions of hydrogen and helium."""
     single = helium.singly_ionized_helium_fraction
     double = helium.doubly_ionized_helium_fraction
     return ionized + cosmology.helium_ratio() * (single + 2.0 * double)

@@ -40,6 +40,10 @@ DRIVE_COMPTON, DRIVE_SCALE, N_DRIVES = 5, 6, 7
 # Statuses of a history.
 DONE, NO_START, TOO_MANY_STEPS, STEP_TOO_SMALL, OUT_OF_RANGE = range(5)
 
+# Whether slopes are wanted beside values. A plain True or False in a call is a type of its own to
+# numba, which would compile the longest kernels once for each; elements of an array are not.
+VALUES, SLOPES = np.array([False, True])
+
 # The Rosenbrock scheme of levelnet/numerics/stepping.py; a test holds them equal.
 STAGE_A = np.array(
     [
@@ -495,7 +499,7 @@ def rate_of_slow(
     growth = math.exp(-s)
     radiation_k = universe.today[5] * growth
     density = universe.today[1] * growth**3
-    flow = net_flow(atom, radiation_k, v, density, hubble, ions, ions, ground, room, False)
+    flow = net_flow(atom, radiation_k, v, density, hubble, ions, ions, ground, room, VALUES)
     share = ions / (1.0 + universe.today[2] + ions)
     compton = atom.constants[4] * radiation_k**4 * share / hubble
     return -flow / (hubble * ions * ground), -1.0 + compton * math.expm1(-v)
@@ -512,7 +516,7 @@ def linearize(
     growth = math.exp(-s)
     radiation_k = universe.today[5] * growth
     density = universe.today[1] * growth**3
-    flow = net_flow(atom, radiation_k, v, density, hubble, ions, ions, ground, room, True)
+    flow = net_flow(atom, radiation_k, v, density, hubble, ions, ions, ground, room, SLOPES)
     by, out = room.slope, room.linear
     scale = -1.0 / (hubble * ions * ground)
     particles = 1.0 + universe.today[2] + ions
@@ -964,7 +968,7 @@ def local_rates(
     ground = 1.0 - electrons
     ratio = math.log(matter_k / radiation_k)
     flow = net_flow(
-        atom, radiation_k, ratio, density, hubble, electrons, electrons, ground, room, True
+        atom, radiation_k, ratio, density, hubble, electrons, electrons, ground, room, SLOPES
     )
     g = room.slope
     particles = 1.0 + helium + electrons

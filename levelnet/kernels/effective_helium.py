@@ -176,6 +176,22 @@ def gain(lines: HeliumLines, k: int, room: LineRoom) -> tuple[float, float, floa
 
 
 @kernel
+def gain_value(lines: HeliumLines, k: int, room: LineRoom) -> float:
+    """Ln(P/S) alone."""
+    value, first, basis = 0.0, room.first, room.basis
+    for a in range(4):
+        row = 0.0
+        for b in range(4):
+            inner = 0.0
+            for c in range(4):
+                one = lines.escape[k, first[0] + a, first[1] + b, first[2] + c]
+                inner += one * basis[2, 0, c]
+            row += basis[1, 0, b] * inner
+        value += basis[0, 0, a] * row
+    return float(room.scale[0] * room.scale[1] * value)
+
+
+@kernel
 def _look_back(memory: Memory, time: float, knot: FloatArray) -> int:
     """Weights (and slopes) of the cubic through the four nearest steps; gives the first of them."""
     count = memory.taken[0]
@@ -259,6 +275,7 @@ def _couple(
     memory: Memory,
     vector: FloatArray,
     room: LineRoom,
+    slopes: bool,
 ) -> None:
     """Losses of the kept levels of He I to its ground state, and what they take from it."""
     for row in range(LOSS, LOSS_MASS + 1):
@@ -270,9 +287,9 @@ def _couple(
     column = place.density * ground / place.hubble
     tabulated = lines.escape.shape[1] > 1
     if tabulated:
-        locate(lines, 0, math.log(column), room)
-        locate(lines, 1, place.hydrogen, room)
-        locate(lines, 2, math.log(place.radiation_k), room)
+        here = math.log(column), place.hydrogen, math.log(place.radiation_k)
+        for axis in range(3):
+            locate(lines, axis, here[axis], room)
     for k in range(lines.upper.shape[0]):
         i = lines.upper[k]
         exponent = lines.line[ENERGY, k] * inverse
@@ -281,7 +298,9 @@ def _couple(
         depth = lines.line[DEPTH, k] * column
         chance, slope = _sobolev(depth)
         more, by_column, by_hydrogen, by_heat = 0.0, 0.0, 0.0, 0.0
-        if tabulated:
+        if tabulated and not slopes:
+            more = gain_value(lines, k, room)
+        elif tabulated:
             more, by_column, by_hydrogen, by_heat = gain(lines, k, room)
         rate = lines.line[RATE, k] * emitted * chance * math.exp(more)
         vector[LOSS, i] += rate
@@ -338,7 +357,7 @@ def first_flow(
     """Net recombinations to He I per nucleus and second and, with `slopes`, their derivatives."""
     x, inverse = math.log(place.radiation_k), 1.0 / place.radiation_k
     read_table(atom, x, inverse, place.ratio, room, slopes)
-    _couple(atom, lines, place, neutral, memory, room.vector, line_room)
+    _couple(atom, lines, place, neutral, memory, room.vector, line_room, slopes)
     room.slope[-1] = 0.0
     pairs = place.density * place.electrons * single
     flow = solve_kept(atom, inverse, pairs, neutral, room, slopes)

@@ -45,9 +45,16 @@ from .effective_helium import (
 )
 
 FloatArray = NDArray[np.float64]
+IntArray = NDArray[np.int64]
 
 # Elements of `Plasma.limits`.
 COLDEST_K, EBB, PULL, GONE, FADING = range(5)
+# Elements of `Desk.mode`, and what they may be: levels, pull to Saha equilibrium, no change.
+OF_HYDROGEN, OF_FIRST, OF_SECOND = range(3)
+NETWORK, SAHA, HELD = range(3)
+# ln of x_HeIII/x_HeII, and of x_HeII/x_HeI, below which a history no longer follows the levels:
+# 1e-13 and 1e-15.
+DOUBLE_GONE, SINGLE_GONE = -30.0, -34.5
 
 
 class Plasma(NamedTuple):
@@ -70,13 +77,17 @@ class Plasma(NamedTuple):
 
 
 class Desk(NamedTuple):
-    """Working arrays: rate (4,), matrix (4, 4), drift (4,), flow (2, 7), row (3, 7) and rooms."""
+    """Working arrays: rate (4,), matrix (4, 4), drift (4,), flow (2, 7), row (4, 7) and rooms.
+
+    mode (3,): how H, He I and He II are followed; made so that all follow their levels.
+    """
 
     rate: FloatArray
     matrix: FloatArray
     drift: FloatArray
     flow: FloatArray
     row: FloatArray
+    mode: IntArray
     hydrogen: Room
     first: Room
     second: Room
@@ -92,7 +103,8 @@ def make_desk(plasma: Plasma) -> Desk:
         np.zeros((4, 4)),
         np.zeros(4),
         np.zeros((2, 7)),
-        np.zeros((3, 7)),
+        np.zeros((4, 7)),
+        np.zeros(3, np.int64),
         make_room(plasma.hydrogen.level.shape[1], plasma.hydrogen.lower.shape[0]),
         make_room(count, plasma.first.lower.shape[0]),
         make_room(plasma.second.level.shape[1], plasma.second.lower.shape[0]),
@@ -148,14 +160,14 @@ def _second_row(
 
 
 @inlined
-def _saha_row(plasma: Plasma, place: Place, b: float, row: FloatArray) -> None:
-    """Rate of b and its derivatives where it is pulled to Saha equilibrium at T_m."""
+def _saha_row(plasma: Plasma, place: Place, ion: int, value: float, row: FloatArray) -> None:
+    """Rate of ln(ion/ground state) and derivatives where pulled to Saha equilibrium at T_m."""
     matter_k = place.radiation_k * math.exp(place.ratio)
-    reach = plasma.saha[2, 1] / matter_k
-    there = plasma.saha[2, 0] + 1.5 * math.log(matter_k) - reach
+    reach = plasma.saha[ion, 1] / matter_k
+    there = plasma.saha[ion, 0] + 1.5 * math.log(matter_k) - reach
     there -= math.log(place.electrons * place.density)
     pull = plasma.limits[PULL]
-    row[0], row[1], row[2], row[3] = pull * (there - b), 0.0, -pull, -pull
+    row[0], row[1], row[2], row[3] = pull * (there - value), 0.0, -pull, -pull
     row[4], row[5], row[6] = pull * (1.5 + reach), pull * (1.5 - reach), 0.0
 
 
@@ -166,33 +178,38 @@ def _helium(
     """Rows 0 and 1 of ``desk.row``: rates of a and b, with `slopes` their derivatives."""
     row, limits = desk.row, plasma.limits
     full, fading = _ramp(math.log(place.radiation_k / limits[COLDEST_K]) / limits[EBB])
-    if full == 0.0:
-        row[:] = 0.0
+    if full == 0.0 or desk.mode[OF_FIRST] == HELD:
+        row[:2] = 0.0
         return
     charged, neutral = split_odds(a)
     share, rest = split_odds(b)
     single, double = charged * rest, charged * share
-    first_flow(
-        plasma.first,
-        plasma.lines,
-        place,
-        single,
-        neutral,
-        memory,
-        desk.first,
-        desk.lines,
-        slopes,
-        desk.flow[0],
-    )
-    _first_row(place, neutral, charged, share, desk)
+    if desk.mode[OF_FIRST] == NETWORK:
+        first_flow(
+            plasma.first,
+            plasma.lines,
+            place,
+            single,
+            neutral,
+            memory,
+            desk.first,
+            desk.lines,
+            slopes,
+            desk.flow[0],
+        )
+        _first_row(place, neutral, charged, share, desk)
+    else:
+        desk.flow[0, :] = 0.0
+        _saha_row(plasma, place, 1, a - math.log1p(math.exp(min(b, 700.0))), row[0])
+        row[0, 1], row[0, 2] = row[0, 2], -row[0, 2] * share
     part, turn = _ramp((b - limits[GONE]) / (limits[FADING] - limits[GONE]))
-    if plasma.levels == 0 or part == 0.0:
-        _saha_row(plasma, place, b, row[1])
+    if plasma.levels == 0 or part == 0.0 or desk.mode[OF_SECOND] == SAHA:
+        _saha_row(plasma, place, 2, b, row[1])
     else:
         second_flow(plasma.second, place, double, single, desk.second, slopes, desk.flow[1])
         _second_row(place, neutral, charged, share, rest, desk)
         if part < 1.0:
-            _saha_row(plasma, place, b, row[2])
+            _saha_row(plasma, place, 2, b, row[2])
             apart = row[1, 0] - row[2, 0]
             for k in range(7):
                 row[1, k] = part * row[1, k] + (1.0 - part) * row[2, k]
@@ -228,18 +245,6 @@ def evaluate(
     radiation_k = universe.today[5] * growth
     density = universe.today[1] * growth**3
     electrons = electrons_of(plasma, state)
-    flow = stage_flow(
-        plasma.hydrogen,
-        radiation_k,
-        v,
-        density,
-        hubble,
-        electrons,
-        ions,
-        ground,
-        desk.hydrogen,
-        slopes,
-    )
     place = Place(
         s,
         radiation_k,
@@ -250,12 +255,29 @@ def evaluate(
         electrons / helium,
         math.log(density * ground / hubble),
     )
+    flow = 0.0
+    if desk.mode[OF_HYDROGEN] == NETWORK:
+        flow = stage_flow(
+            plasma.hydrogen,
+            radiation_k,
+            v,
+            density,
+            hubble,
+            electrons,
+            ions,
+            ground,
+            desk.hydrogen,
+            slopes,
+        )
+    else:
+        _saha_row(plasma, place, 0, state[0], desk.row[3])
     _helium(plasma, place, state[2], state[3], memory, desk, slopes)
     scale = -1.0 / (hubble * ions * ground)
     particles = 1.0 + helium + electrons
     compton = plasma.hydrogen.constants[4] * radiation_k**4 * electrons / particles / hubble
     cooling = compton * math.expm1(-v)
-    rate[0], rate[1] = scale * flow, -1.0 + cooling
+    rate[0] = scale * flow if desk.mode[OF_HYDROGEN] == NETWORK else desk.row[3, 0]
+    rate[1] = -1.0 + cooling
     rate[2], rate[3] = desk.row[0, 0], desk.row[1, 0]
     if slopes:
         _linear(plasma, place, state, flow, electrons, compton, desk)
@@ -281,11 +303,15 @@ def _linear(
     scale = -1.0 / (place.hubble * ions * ground)
     cooling = compton * math.expm1(-state[1])
     matrix[:] = 0.0
-    matrix[0, 0] = scale * (ground * (by[BY_IONIZED] - flow) - ions * (by[BY_GROUND] - flow))
-    matrix[0, 1] = scale * by[BY_MATTER]
+    if desk.mode[OF_HYDROGEN] == NETWORK:
+        matrix[0, 0] = scale * (ground * (by[BY_IONIZED] - flow) - ions * (by[BY_GROUND] - flow))
+        matrix[0, 1] = scale * by[BY_MATTER]
+        moved = by[BY_RADIATION] + by[BY_MATTER]
+        drift[0] = scale * (-moved - 3.0 * by[BY_DENSITY] + hubble_slope * (by[BY_HUBBLE] - flow))
+        row[3, 3] = scale * by[BY_ELECTRONS]
+    else:
+        matrix[0, 0], matrix[0, 1], drift[0] = row[3, 2], row[3, 4], row[3, 5]
     matrix[1, 1] = -compton * math.exp(-state[1])
-    moved = by[BY_RADIATION] + by[BY_MATTER]
-    drift[0] = scale * (-moved - 3.0 * by[BY_DENSITY] + hubble_slope * (by[BY_HUBBLE] - flow))
     drift[1] = -cooling * (4.0 + hubble_slope)
     for i in range(2):
         matrix[2 + i, 2], matrix[2 + i, 3] = row[i, 1], row[i, 2]
@@ -299,7 +325,7 @@ def _linear(
     by_b = of_helium * rest * share
     for i in range(4):
         if i == 0:
-            through = scale * by[BY_ELECTRONS]
+            through = row[3, 3]
         elif i == 1:
             through = cooling * (1.0 + helium) / (1.0 + helium + electrons)
         else:
@@ -307,3 +333,21 @@ def _linear(
         matrix[i, 0] += through * by_u
         matrix[i, 2] += through * by_a
         matrix[i, 3] += through * by_b
+
+
+@kernel
+def choose_modes(plasma: Plasma, place: Place, state: FloatArray, desk: Desk) -> bool:
+    """Choose how each ion is followed from here, by the slopes just found; whether that changed.
+
+    An ion that its levels return to Saha equilibrium faster than the pull does is pulled: either
+    lags by less than 1e-7. Once hardly any He III or He II is left, it is pulled or held.
+    """
+    mode, changed = desk.mode, False
+    for ion in range(2):
+        if mode[ion] == NETWORK and desk.matrix[2 * ion, 2 * ion] < -plasma.limits[PULL]:
+            mode[ion], changed = SAHA, True
+    if mode[OF_SECOND] == NETWORK and state[3] < DOUBLE_GONE:
+        mode[OF_SECOND], changed = SAHA, True
+    if mode[OF_FIRST] == NETWORK and state[2] < SINGLE_GONE:
+        mode[OF_FIRST], changed = HELD, True
+    return changed

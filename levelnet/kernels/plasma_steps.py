@@ -5,7 +5,7 @@ import math
 import numpy as np
 from numpy.typing import NDArray
 
-from .compile import kernel
+from .compile import borrowed, inlined, kernel
 from .effective import (
     DONE,
     GAMMA,
@@ -13,12 +13,14 @@ from .effective import (
     OUT_OF_RANGE,
     SAFETY,
     SHRINK,
+    SLOPES,
     STAGE_A,
     STAGE_C,
     STAGE_NODE,
     STAGE_TIME,
     STEP_TOO_SMALL,
     TOO_MANY_STEPS,
+    VALUES,
     interpolate,
     solve_many,
     split_odds,
@@ -30,8 +32,14 @@ from .effective_helium import (
 )
 from .effective_plasma import (
     COLDEST_K,
+    NETWORK,
+    OF_FIRST,
+    OF_HYDROGEN,
+    OF_SECOND,
+    SAHA,
     Desk,
     Plasma,
+    choose_modes,
     electrons_of,
     evaluate,
     make_desk,
@@ -89,7 +97,7 @@ def lagging_state(plasma: Plasma, s: float, memory: Memory, desk: Desk, state: F
     for i in range(4):
         drift[i, 0] = (state[i] - before[i]) / (2.0 * step)
     saha_state(plasma, s, state)
-    _ = evaluate(plasma, s, state, memory, desk, True)
+    _ = evaluate(plasma, s, state, memory, desk, SLOPES)
     largest = 0.0
     for i in range(4):
         if i != 1 and (i < 3 or plasma.levels == 1):
@@ -108,7 +116,7 @@ def lagging_state(plasma: Plasma, s: float, memory: Memory, desk: Desk, state: F
     return largest
 
 
-@kernel
+@inlined
 def find_start(
     plasma: Plasma, top_k: float, bottom_k: float, tolerance: float, memory: Memory, desk: Desk
 ) -> float:
@@ -117,7 +125,7 @@ def find_start(
     At the top they need not: the state there has its lag to first order.
     """
     state = np.empty(4)
-    s, step = plasma.universe.today[0] - math.log(top_k), 0.02
+    s, step = plasma.universe.today[0] - math.log(top_k), 0.04
     end = plasma.universe.today[0] - math.log(bottom_k)
     while s + step < end:
         if not lagging_state(plasma, s + step, memory, desk, state) < tolerance:
@@ -126,7 +134,7 @@ def find_start(
     return float(s)
 
 
-@kernel
+@inlined
 def _step(
     plasma: Plasma,
     s: float,
@@ -165,7 +173,7 @@ def _step(
                 if not abs(at[i]) < 700.0:
                     stages[8, :] = 1e300
                     return
-            _ = evaluate(plasma, s + STAGE_NODE[k] * h, at, memory, desk, False)
+            _ = evaluate(plasma, s + STAGE_NODE[k] * h, at, memory, desk, VALUES)
         for i in range(4):
             value = stages[6, i] if k == 0 else desk.rate[i]
             right[i] = value + h * STAGE_TIME[k] * desk.drift[i]
@@ -180,11 +188,11 @@ def _step(
         stages[8, i] = stages[5, i]
 
 
-@kernel
-def _slack(log_odds: float) -> float:
-    """How much more a fraction may err that is far below 1 per cent: up to 100 times."""
+@inlined
+def _slack(log_odds: float, most: float) -> float:
+    """How much more a fraction may err that is far below 1 per cent: up to `most` times."""
     least = math.exp(-abs(log_odds))
-    return min(100.0, max(1.0, math.sqrt(0.01 / least))) if least > 1e-30 else 100.0
+    return min(most, max(1.0, math.sqrt(0.01 / least))) if least > 1e-30 else most
 
 
 @kernel
@@ -200,26 +208,35 @@ def _integrate(
     desk: Desk,
 ) -> tuple[int, int, int]:
     """Steps from times[0] to `end`; gives the status, the number of points and of rejections."""
+    plasma, memory, desk = borrowed(plasma), borrowed(memory), borrowed(desk)
     stages, inverse, slack = np.zeros((9, 4)), np.zeros((4, 4)), np.ones(4)
     point = states[0].copy()
     now, h = times[0], first_step
     count, rejected = 1, 0
     while now < end:
         desk.lines.outside[0] = 0
-        place = evaluate(plasma, now, point, memory, desk, True)
+        for ion in (OF_HYDROGEN, OF_FIRST):
+            if desk.mode[ion] == SAHA:  # only for one step
+                desk.mode[ion] = NETWORK
+        place = evaluate(plasma, now, point, memory, desk, SLOPES)
         if desk.lines.outside[0] != 0:
             return OUTSIDE_ESCAPE, count, rejected
-        if place.radiation_k > plasma.limits[COLDEST_K]:
+        if place.radiation_k > plasma.limits[COLDEST_K] and desk.mode[OF_FIRST] == NETWORK:
             _, neutral = split_odds(point[2])
             remember(plasma.first, plasma.lines, place, neutral, memory, desk.first, desk.lines)
+        if choose_modes(plasma, place, point, desk):
+            place = evaluate(plasma, now, point, memory, desk, SLOPES)
+        # Only while lines light each other.
+        limited = desk.mode[OF_FIRST] == NETWORK and place.radiation_k > plasma.limits[COLDEST_K]
         stages[6, :] = desk.rate
-        slack[0] = _slack(max(point[0], 0.0))  # what is left ionized at the end may not
-        slack[2], slack[3] = _slack(point[2]), _slack(point[3])
+        slack[0] = _slack(max(point[0], 0.0), 100.0)  # what is left ionized at the end may not
+        slack[2] = _slack(point[2], 4.0)
+        slack[3] = 1e6 if desk.mode[OF_SECOND] == SAHA else _slack(point[3], 15.0)
         while True:
             if count + rejected >= times.shape[0]:
                 return TOO_MANY_STEPS, count, rejected
             pieces = max(1.0, math.ceil((end - now) / h - 0.1))
-            if place.radiation_k > plasma.limits[COLDEST_K]:
+            if limited:
                 pieces = max(pieces, math.ceil((end - now) / longest))
             trial = (end - now) / pieces
             _step(plasma, now, trial, point, stages, inverse, memory, desk)
@@ -244,6 +261,23 @@ def _integrate(
         states[count, :] = point
         count += 1
     return DONE, count, rejected
+
+
+@inlined
+def _above(
+    plasma: Plasma,
+    outputs: FloatArray,
+    start: float,
+    memory: Memory,
+    desk: Desk,
+    states: FloatArray,
+) -> int:
+    """Fill in the outputs above the start, in equilibrium; gives how many there are."""
+    count = 0
+    while count < outputs.shape[0] and outputs[count] <= start:
+        _ = lagging_state(plasma, outputs[count], memory, desk, states[count])
+        count += 1
+    return count
 
 
 @kernel
@@ -289,20 +323,3 @@ def plasma_history(
     interpolate(times[:count], points[:count], outputs, above, states)
     interpolate(times[:count], points[:count], grid, grid_above, grid_states)
     return status
-
-
-@kernel
-def _above(
-    plasma: Plasma,
-    outputs: FloatArray,
-    start: float,
-    memory: Memory,
-    desk: Desk,
-    states: FloatArray,
-) -> int:
-    """Fill in the outputs above the start, in equilibrium; gives how many there are."""
-    count = 0
-    while count < outputs.shape[0] and outputs[count] <= start:
-        _ = lagging_state(plasma, outputs[count], memory, desk, states[count])
-        count += 1
-    return count

@@ -31,7 +31,17 @@ from levelnet.history.equations import SlowEquations
 from levelnet.history.helium_atom import build_helium
 from levelnet.history.integrate import slow_equations
 from levelnet.kernels.effective_helium import gain, locate, make_line_room, remember
-from levelnet.kernels.effective_plasma import evaluate, make_desk, make_memory
+from levelnet.kernels.effective_plasma import (
+    HELD,
+    NETWORK,
+    OF_FIRST,
+    OF_SECOND,
+    SAHA,
+    choose_modes,
+    evaluate,
+    make_desk,
+    make_memory,
+)
 from levelnet.kernels.plasma_steps import saha_state
 from levelnet.store import TABLE_LAYOUT, read_table, write_distilled, write_distilled_csv
 from tests.helium_tables import PIECES, helium_setup, helium_table
@@ -69,6 +79,51 @@ def test_rates_and_jacobian_are_those_of_the_full_equations(
     np.testing.assert_allclose(desk.matrix / scale[:, None], exact.matrix / scale[:, None],
                                atol=SAME_RATES)  # fmt: skip
     np.testing.assert_allclose(desk.drift, exact.drift, rtol=1e-5, atol=1e-8 * scale.max())
+
+
+def test_an_ion_whose_levels_outpace_the_pull_is_pulled_to_saha_equilibrium() -> None:
+    table = helium_table("sobolev", "network")
+    plasma = plasma_of(table, make_atom(table), COSMOLOGY, -9.3, -3.0)
+    desk, memory, state = make_desk(plasma), make_memory(4, 4), np.zeros(4)
+    for redshift, modes in (
+        (6000.0, [SAHA, SAHA, NETWORK]),
+        (3000.0, [SAHA, NETWORK, SAHA]),
+        (1900.0, [NETWORK, NETWORK, SAHA]),
+    ):
+        desk.mode[:] = NETWORK
+        saha_state(plasma, -math.log1p(redshift), state)
+        place = evaluate(plasma, -math.log1p(redshift), state, memory, desk, True)
+        assert choose_modes(plasma, place, state, desk)
+        assert desk.mode.tolist() == modes
+    state[2] = -36.0
+    assert choose_modes(plasma, place, state, desk)
+    assert desk.mode[OF_FIRST] == HELD
+    evaluate(plasma, -math.log1p(1900.0), state, memory, desk, True)
+    assert not desk.rate[2:].any() and not desk.matrix[2:].any()
+
+
+def test_pulled_ions_come_to_rest_in_equilibrium_with_the_slopes_of_their_rates() -> None:
+    table, s = helium_table("sobolev", "network"), -math.log1p(4500.0)
+    plasma = plasma_of(table, make_atom(table), COSMOLOGY, -9.3, -3.0)
+    desk, memory, state = make_desk(plasma), make_memory(4, 4), np.zeros(4)
+    desk.mode[:] = SAHA
+    saha_state(plasma, s, state)
+    evaluate(plasma, s, state, memory, desk, True)
+    # The pull is 1e9: a thousandth of the accuracy asked is left.
+    assert np.abs(desk.rate[[0, 2, 3]]).max() < 1.0
+    matrix, drift = desk.matrix.copy(), desk.drift.copy()
+    step = 1e-4
+
+    def rate(at: float, there: np.ndarray) -> np.ndarray:
+        evaluate(plasma, at, there, memory, desk, False)
+        return desk.rate.copy()
+
+    for k, move in enumerate(step * np.eye(4)):
+        slope = (rate(s, state + move) - rate(s, state - move)) / (2.0 * step)
+        np.testing.assert_allclose(matrix[:, k], slope, rtol=1e-5, atol=10.0)
+    slope = (rate(s + step, state) - rate(s - step, state)) / (2.0 * step)
+    np.testing.assert_allclose(drift, slope, rtol=1e-5, atol=10.0)
+    assert desk.mode[OF_SECOND] == SAHA
 
 
 @pytest.mark.parametrize("lines", ["sobolev_feedback", "continuum"])
