@@ -7,8 +7,9 @@ import re
 import time
 from collections.abc import Iterator
 from contextlib import contextmanager
+from importlib import import_module
 from pathlib import Path
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 from ..errors import InputError, SolveError
 from .console import Console
@@ -219,13 +220,13 @@ def _executor(scheduler: str | None, workers: int) -> Iterator[Executor | None]:
             yield executor
         return
     try:
-        from distributed import Client
+        dask: Any = import_module("distributed")
     except ImportError:
         raise InputError(
             "--scheduler: needs the library distributed: install levelnet[cluster]"
         ) from None
     try:
-        client = Client(scheduler, timeout=_ANSWER_S, set_as_default=False)
+        client = dask.Client(scheduler, timeout=_ANSWER_S, set_as_default=False)
     except (OSError, ValueError, TypeError) as error:
         raise InputError(
             f"--scheduler {scheduler}: no scheduler answers there: {error or type(error).__name__}"
