@@ -20,7 +20,7 @@ from levelnet.studies.level_records import Estimate, LevelStudy
 from levelnet.studies.levels import carry_all, level_study
 from levelnet.studies.rung import RungResult, compute_rung, rung_setup, study_setup
 from tests.small_runs import COSMOLOGY
-from tests.tolerances import published
+from tests.tolerances import ROUND_OFF, published
 
 pytestmark = pytest.mark.slow
 
@@ -78,7 +78,8 @@ def test_law_foresees_longer_rungs(case: str, rungs: tuple[int, ...]) -> None:
     )
     temperature = found.matter_temperature_k
     miss = np.abs(np.log(temperature.value / actual.matter_temperature_k))
-    assert np.all(miss <= temperature.relative_error)
+    # Where matter is at T_r both are the same number but for rounding.
+    assert np.all(miss <= temperature.relative_error + ROUND_OFF)
     miss = np.abs(np.log(found.observable.value / actual.observable))
     assert np.all(miss <= found.observable.relative_error)
 
