@@ -6,7 +6,8 @@ from typing import Any
 
 import numpy as np
 
-from levelnet.studies.sweep_record import HISTORY_ARRAYS, Sweep
+from levelnet.history.result import HISTORY_ARRAYS
+from levelnet.studies.sweep_record import Sweep
 from tests.small_runs import small_setup
 
 

@@ -199,8 +199,7 @@ class Diagnostics:
     frequency_error: float = 0.0
 
 
-_HISTORY_ARRAYS = (
-    "redshift",
+HISTORY_ARRAYS = (
     "free_electron_fraction",
     "ionized_hydrogen_fraction",
     "neutral_hydrogen_fraction",
@@ -215,6 +214,7 @@ _HISTORY_ARRAYS = (
     "optical_depth",
     "visibility",
 )
+"""Arrays over the redshift, besides it."""
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -296,7 +296,7 @@ class History:
 
     def __post_init__(self) -> None:
         """Check shapes and make every array read-only."""
-        for name in _HISTORY_ARRAYS:
+        for name in ("redshift", *HISTORY_ARRAYS):
             frozen_array(self, name, (len(self.redshift),))
 
     def require_converged(self) -> None:
@@ -328,7 +328,7 @@ class History:
         import xarray
 
         arrays: dict[str, Any] = {
-            name: ("redshift", getattr(self, name)) for name in _HISTORY_ARRAYS[1:]
+            name: ("redshift", getattr(self, name)) for name in HISTORY_ARRAYS
         }
         return xarray.Dataset(arrays, coords={"redshift": self.redshift})
 

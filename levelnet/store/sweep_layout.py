@@ -164,7 +164,8 @@ def _values(sweep: Sweep, one: Variable, columns: Mapping[str, tuple[Any, ...]])
 
 def sweep_of(content: Content) -> Sweep:
     """Make the sweep that :func:`sweep_content` took apart."""
-    from ..studies.sweep_record import HISTORY_ARRAYS, Sweep
+    from ..history.result import HISTORY_ARRAYS
+    from ..studies.sweep_record import Sweep
 
     lines = str(content.attributes["swept"]).splitlines()
     keys = tuple(line.partition(" ")[2] for line in lines)

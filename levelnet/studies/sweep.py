@@ -13,12 +13,13 @@ from ..arrays import FloatArray
 from ..errors import InputError
 from ..history.cost import estimate
 from ..history.integrate import Progress
+from ..history.result import HISTORY_ARRAYS
 from ..history.setup import Setup
 from ..pieces import MemoryPieces, Pieces, array_text
 from ..quantities import OBSERVABLES, at_redshift
 from .jobs import run_each
 from .sweep_cases import Cases
-from .sweep_record import HISTORY_ARRAYS, Sweep
+from .sweep_record import Sweep
 from .sweep_run import CaseResult, case_key, compute_case, failure, packed, unpacked
 
 

@@ -10,6 +10,7 @@ import numpy as np
 
 from ..arrays import FloatArray, frozen_array
 from ..errors import Outcome
+from ..history.result import HISTORY_ARRAYS
 from ..markup import html_table
 from .sweep_cases import case_label
 
@@ -17,22 +18,6 @@ if TYPE_CHECKING:
     import xarray
 
 _SHOWN = 10  # cases that a notebook lists
-HISTORY_ARRAYS = (
-    "free_electron_fraction",
-    "ionized_hydrogen_fraction",
-    "neutral_hydrogen_fraction",
-    "neutral_helium_fraction",
-    "singly_ionized_helium_fraction",
-    "doubly_ionized_helium_fraction",
-    "matter_temperature_k",
-    "radiation_temperature_k",
-    "hydrogen_density_cm3",
-    "hubble_rate_per_s",
-    "cosmic_time_s",
-    "optical_depth",
-    "visibility",
-)
-"""Arrays of every case, those of :class:`levelnet.History`."""
 
 
 @dataclass(frozen=True, slots=True, eq=False)

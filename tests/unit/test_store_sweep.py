@@ -11,11 +11,12 @@ import xarray
 
 import levelnet
 from levelnet.errors import FileFormatError
+from levelnet.history.result import HISTORY_ARRAYS
 from levelnet.store.digest import content_digest, seal
 from levelnet.store.sweep_layout import describe_sweep_layout, sealed_content
 from levelnet.store.whole_file import whole_file
 from levelnet.store.write import save
-from levelnet.studies.sweep_record import HISTORY_ARRAYS, Sweep
+from levelnet.studies.sweep_record import Sweep
 from tests.invented_sweep import invented
 from tests.small_runs import small_setup
 

@@ -16,6 +16,7 @@ import pytest
 
 import levelnet
 from levelnet.errors import InputError, Outcome
+from levelnet.history.result import HISTORY_ARRAYS
 from levelnet.history.run import solve
 from levelnet.history.setup import parse_setup
 from levelnet.pieces import MemoryPieces, ResultFolder
@@ -25,7 +26,7 @@ from levelnet.studies.jobs import run_each
 from levelnet.studies.rung import observables_of
 from levelnet.studies.sweep import Missing, compute_missing, gather, shard_of, sweep
 from levelnet.studies.sweep_cases import Cases, vary
-from levelnet.studies.sweep_record import HISTORY_ARRAYS, Sweep
+from levelnet.studies.sweep_record import Sweep
 from levelnet.studies.sweep_run import case_key, unpacked
 from tests.small_runs import small_setup
 
