@@ -89,7 +89,7 @@ def border_symmetric(
     """
     n_inner = coupling.shape[1]
     _require_exit(excess)
-    response = inner.solve_many(coupling)
+    response = inner.solve(coupling)
     v = weight[n_inner:]
     schur = corner + response @ coupling.T
     schur = 0.5 * (schur + schur.T)

@@ -10,8 +10,8 @@ from scipy import sparse
 from scipy.sparse.linalg import splu
 
 from levelnet.errors import SolveError
-from levelnet.numerics import block_cholesky
-from levelnet.numerics.block_cholesky import SMALL_BLOCK, factor_symmetric
+from levelnet.kernels.blocks import PANEL, SMALL, WIDE
+from levelnet.numerics.block_cholesky import factor_symmetric
 from levelnet.numerics.block_system import BlockShape
 from tests.random_networks import Symmetric, symmetric_network
 from tests.tolerances import CONSERVATION, ELIMINATION, ROUND_OFF
@@ -27,9 +27,12 @@ SIZES = [
     [0, 4, 3],
     [4, 3, 0],
     [0, 0, 2, 0],
-    [SMALL_BLOCK, SMALL_BLOCK - 1, 7],
-    [SMALL_BLOCK + 1, 3, 1, 0, 9, 20],
-    [2, SMALL_BLOCK + 20, SMALL_BLOCK + 19],
+    [PANEL + 1, PANEL, PANEL - 1],
+    [SMALL + 1, SMALL, 7],
+    [SMALL, SMALL + 1, 1, 0, 9, 2 * PANEL],
+    [2, 5 * PANEL + 1, 5 * PANEL],
+    [WIDE + 1, WIDE, 3],
+    [5, WIDE + PANEL + 3, 40],
 ]
 shapes = st.lists(st.integers(0, 6), min_size=1, max_size=7).filter(lambda sizes: sum(sizes) > 0)
 
@@ -82,7 +85,7 @@ def test_adjoint_identity(sizes: list[int], seed: int) -> None:
 
 
 @pytest.mark.parametrize("decades", [1.0, 6.0, 14.0])
-@pytest.mark.parametrize("sizes", [[9, 8, 7, 5], [SMALL_BLOCK + 2, SMALL_BLOCK, 3]], ids=str)
+@pytest.mark.parametrize("sizes", [[9, 8, 7, 5], [SMALL + 2, SMALL, 3], [60, 59, 58]], ids=str)
 def test_what_enters_leaves(sizes: list[int], decades: float) -> None:
     # Grassmann, Taksar & Heyman 1985, Oper. Res. 33, 1107: v.r = v.(H x) = c.x.
     rng = np.random.default_rng(3)
@@ -133,16 +136,23 @@ def test_a_trap_inside_the_first_block_costs_its_condition_only() -> None:
         assert relative_error(solution, network.exact_solution(right)) < ROUND_OFF / leak
 
 
-@pytest.mark.parametrize("sizes", [[5, 4, 3], [12, 0, 7], [SMALL_BLOCK, 30, 1]], ids=str)
-def test_compiled_and_library_paths_agree(
-    sizes: list[int], monkeypatch: pytest.MonkeyPatch
-) -> None:
-    rng = np.random.default_rng(2)
-    network = symmetric_network(sizes, rng, 3.0, 1e-2)
-    right = rng.uniform(0.0, 1.0, (2, sum(sizes)))
-    compiled = network.factor().solve(right)
-    monkeypatch.setattr(block_cholesky, "SMALL_BLOCK", -1)
-    np.testing.assert_allclose(network.factor().solve(right), compiled, rtol=100 * ROUND_OFF)
+@pytest.mark.parametrize(
+    "sizes",
+    [[4], [3, 2], [5, 4, 3, 2, 1], [2, 6, 3], [SMALL + 5, SMALL + 4], [WIDE + 9, 2]],
+    ids=str,
+)
+def test_factors_multiply_to_the_matrix(sizes: list[int]) -> None:
+    # Eliminated from the last block: H = U U^T, U upper block bidiagonal: L on the diagonal,
+    # -X = -B L^-T above it.
+    network = symmetric_network(sizes, np.random.default_rng(2))
+    factored = network.factor()
+    shape, root = network.shape, np.zeros((sum(sizes), sum(sizes)))
+    for block in range(len(sizes)):
+        rows = shape.slice(block)
+        root[rows, rows] = np.tril(shape.factor(factored.factor, block))
+        if block + 1 < len(sizes):
+            root[rows, shape.slice(block + 1)] = -shape.coupling(factored.coupling, block)
+    np.testing.assert_allclose(root @ root.T, network.dense(), rtol=0, atol=10 * ROUND_OFF)
 
 
 def test_large_blocks_against_the_sparse_solver() -> None:
@@ -153,36 +163,25 @@ def test_large_blocks_against_the_sparse_solver() -> None:
     assert relative_error(network.factor().solve(right), expected) < ELIMINATION
 
 
-@pytest.mark.parametrize("large", [False, True])
-@pytest.mark.parametrize("sizes", [[1, 1, 1], [1, 4, 3], [6, 1], [4, 3], [5, 6, 5]], ids=str)
-def test_a_network_without_exit_is_singular(
-    sizes: list[int], large: bool, monkeypatch: pytest.MonkeyPatch
-) -> None:
-    if large:
-        monkeypatch.setattr(block_cholesky, "SMALL_BLOCK", -1)
+@pytest.mark.parametrize(
+    "sizes", [[1, 1, 1], [1, 4, 3], [6, 1], [4, 3], [5, 6, 5], [1, 30, 29]], ids=str
+)
+def test_a_network_without_exit_is_singular(sizes: list[int]) -> None:
     for seed in range(10):
         network = symmetric_network(sizes, np.random.default_rng(seed), 2.0, 0.0)
         with pytest.raises(SolveError, match=r"rate matrix is singular.*block l = 0"):
             network.factor()
 
 
-@pytest.mark.parametrize("large", [False, True])
-def test_a_part_without_exit_is_singular(large: bool, monkeypatch: pytest.MonkeyPatch) -> None:
+def test_a_part_without_exit_is_singular() -> None:
     # Two networks that do not talk: one has an exit, the other has none.
-    if large:
-        monkeypatch.setattr(block_cholesky, "SMALL_BLOCK", -1)
     for leaking, closed in ((0, 3), (6, 0)):
         network = symmetric_network([1, 4, 0, 1, 3], np.random.default_rng(6), 2.0, 0.1, leaking)
         with pytest.raises(SolveError, match=rf"rate matrix is singular.*block l = {closed}"):
             network.factor()
 
 
-@pytest.mark.parametrize("large", [False, True])
-def test_a_matrix_that_is_not_positive_is_an_error(
-    large: bool, monkeypatch: pytest.MonkeyPatch
-) -> None:
-    if large:
-        monkeypatch.setattr(block_cholesky, "SMALL_BLOCK", -1)
+def test_a_matrix_that_is_not_positive_is_an_error() -> None:
     network = symmetric_network([3, 4, 2], np.random.default_rng(6))
     network.outflow[3:7] = -1e3  # takes back more than what leaves
     with pytest.raises(SolveError, match="block l = 1"):
@@ -196,7 +195,7 @@ def test_one_unknown_without_exit_is_singular() -> None:
 
 
 def test_an_excess_that_is_no_number_is_an_error() -> None:
-    for sizes in ([3, 2], [SMALL_BLOCK + 1, 2]):
+    for sizes in ([3, 2], [SMALL + 1, 2]):
         network = symmetric_network(sizes, np.random.default_rng(0))
         network.excess[-1] = np.nan
         with pytest.raises(SolveError):
@@ -204,7 +203,7 @@ def test_an_excess_that_is_no_number_is_an_error() -> None:
 
 
 def test_a_buffer_in_use_leaves_nothing_of_its_contents() -> None:
-    for sizes in ([4, 3, 2], [SMALL_BLOCK + 5, 0, 3]):
+    for sizes in ([4, 3, 2], [SMALL + 5, 0, 3]):
         network = symmetric_network(sizes, np.random.default_rng(1))
         right = np.ones((1, sum(sizes)))
         fresh = network.factor().solve(right)
@@ -236,7 +235,7 @@ def test_no_unknowns_and_no_right_sides() -> None:
     nothing = np.zeros(0)
     factored = Symmetric(empty, nothing, nothing, nothing, nothing).factor()
     assert factored.solve(np.zeros((2, 0))).shape == (2, 0)
-    for sizes in ([3, 2], [SMALL_BLOCK + 1, 2]):
+    for sizes in ([3, 2], [SMALL + 1, 2]):
         network = symmetric_network(sizes, np.random.default_rng(0))
         assert network.factor().solve(np.zeros((0, sum(sizes)))).shape == (0, sum(sizes))
 

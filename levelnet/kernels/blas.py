@@ -1,0 +1,62 @@
+"""BLAS called from within kernels, on parts of arrays and without a detour over Python.
+
+The routines are those that scipy ships for compiled callers, ``scipy.linalg.cython_blas``. Their
+addresses are arguments of a kernel, so that its machine code can be kept from one process to the
+next.
+"""
+
+from __future__ import annotations
+
+import functools
+from typing import Any, cast
+
+import numpy as np
+from llvmlite import ir
+from numba import types
+from numba.core.cgutils import alloca_once_value as _alloca
+from numba.extending import get_cython_function_address, intrinsic
+from numpy.typing import NDArray
+
+# numba states no types.
+_in_memory: Any = _alloca
+
+
+_ROUTINES = ("dgemm", "dgemv", "dsymv", "dsyrk", "dtrmm", "dtrsm", "dtrsv")
+DGEMM, DGEMV, DSYMV, DSYRK, DTRMM, DTRSM, DTRSV = range(len(_ROUTINES))
+
+
+@functools.cache
+def blas_addresses() -> NDArray[np.int64]:
+    """Addresses of the routines in this process, in the order of DGEMM, DGEMV, ..."""
+    library = "scipy.linalg.cython_blas"
+    return np.array([get_cython_function_address(library, name) for name in _ROUTINES])
+
+
+def _call(typing_context: Any, address: Any, arguments: Any) -> Any:
+    """Call a BLAS routine with a tuple of its arguments.
+
+    Addresses of arrays (uint64, as ``array.ctypes.data`` is) go as they are; everything else by
+    reference, as Fortran wants it: letters (uint8), numbers (float64), and sizes, which become the
+    32-bit integers of BLAS.
+    """
+
+    def code(context: Any, builder: Any, signature: Any, values: Any) -> Any:
+        whole: Any = types.Integer
+        place = ir.IntType(8).as_pointer()
+        handed = []
+        for k, kind in enumerate(signature.args[1].types):
+            value = builder.extract_value(values[1], k)
+            if kind == types.uint64:
+                handed.append(builder.inttoptr(value, place))
+                continue
+            if isinstance(kind, whole) and kind.bitwidth > 32:
+                value = builder.trunc(value, ir.IntType(32))
+            handed.append(builder.bitcast(_in_memory(builder, value), place))
+        routine = ir.FunctionType(ir.VoidType(), [place] * len(handed))
+        builder.call(builder.inttoptr(values[0], routine.as_pointer()), handed)
+        return context.get_dummy_value()
+
+    return types.void(address, arguments), code
+
+
+call: Any = cast(Any, intrinsic(_call))
