@@ -21,8 +21,8 @@ from numpy.typing import NDArray
 _in_memory: Any = _alloca
 
 
-_ROUTINES = ("dgemm", "dgemv", "dsymv", "dsyrk", "dtrmm", "dtrsm", "dtrsv")
-DGEMM, DGEMV, DSYMV, DSYRK, DTRMM, DTRSM, DTRSV = range(len(_ROUTINES))
+_ROUTINES = ("dgemm", "dgemv", "dsymv", "dsyrk", "dtpsv", "dtrmm", "dtrsm", "dtrsv")
+DGEMM, DGEMV, DSYMV, DSYRK, DTPSV, DTRMM, DTRSM, DTRSV = range(len(_ROUTINES))
 
 
 @functools.cache

@@ -2,8 +2,8 @@
 
 What is computed stands in :mod:`levelnet.numerics.block_cholesky`. Flat buffers: the coupling of
 block l to block l + 1 is C-ordered, shape (size[l], size[l + 1]), at ``coupling_start[l]``; the
-factor of block l is Fortran-ordered, shape (size[l], size[l]), at ``factor_start[l]``, its upper
-triangle untouched; vectors at ``start[l]``. BLAS sees a coupling as its transpose.
+factor of block l is a lower triangle, packed column by column, at ``factor_start[l]``; vectors at
+``start[l]``. BLAS sees a coupling as its transpose.
 
 Triangular solves and the Cholesky decomposition go panel by panel: a product for all that is known,
 then a multiplication by the inverse of a small triangle on the diagonal. Libraries reach half of
@@ -17,7 +17,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from .blas import DGEMM, DGEMV, DSYMV, DSYRK, DTRMM, DTRSM, DTRSV, call
+from .blas import DGEMM, DGEMV, DSYMV, DSYRK, DTPSV, DTRMM, DTRSM, DTRSV, call
 from .compile import inlined, kernel
 
 FloatArray = NDArray[np.float64]
@@ -230,15 +230,19 @@ def factor_blocks(
     On entry `coupling` holds B (all entries >= 0), on exit X = B L^-T; `excess` is used up. Returns
     0, or 1 + l where block l is not positive definite.
     """
-    inverse = np.empty(PANEL * (PANEL + (size.max() if len(size) else 0)))
+    largest = size.max() if len(size) else 0
+    inverse = np.empty(PANEL * (PANEL + largest))
+    # Of two blocks at a time: the triangles that are kept are packed away while they are hot.
+    squares = np.empty((2, largest * largest))
     above = 0
     for block in range(len(size) - 1, -1, -1):
-        side, v0, f0 = size[block], start[block], factor_start[block]
-        own, leak = factor[f0 : f0 + side * side], excess[v0 : v0 + side]
+        side, v0 = size[block], start[block]
+        own = squares[block % 2, : side * side]
+        leak = excess[v0 : v0 + side]
         if side and above:
-            x0, g0, w0 = coupling_start[block], factor_start[block + 1], start[block + 1]
-            rows, high = coupling[x0 : x0 + side * above], factor[g0 : g0 + above * above]
-            passed = excess[w0 : w0 + above]
+            x0, w0 = coupling_start[block], start[block + 1]
+            rows = coupling[x0 : x0 + side * above]
+            high, passed = squares[1 - block % 2, : above * above], excess[w0 : w0 + above]
             _fold_in(blas, above, side, high, inverse, passed, rows, own, leak)
         else:
             own[:] = 0.0
@@ -247,8 +251,27 @@ def factor_blocks(
             _set_diagonal(blas, side, v, leak, leaving, own)
             if not _cholesky(blas, side, own, inverse):
                 return 1 + block
+            _pack(side, own, factor[factor_start[block] :])
         above = side
     return 0
+
+
+@kernel
+def _pack(side: int, square: FloatArray, packed: FloatArray) -> None:
+    """Put the lower triangle of a Fortran-ordered square away, column by column."""
+    at = 0
+    for j in range(side):
+        packed[at : at + side - j] = square[j * side + j : (j + 1) * side]
+        at += side - j
+
+
+@kernel
+def _unpack(side: int, packed: FloatArray, square: FloatArray) -> None:
+    """Undo :func:`_pack`; what stands above the diagonal is left as it is."""
+    at = 0
+    for j in range(side):
+        square[j * side + j : (j + 1) * side] = packed[at : at + side - j]
+        at += side - j
 
 
 @kernel
@@ -277,17 +300,19 @@ def _solve_triangle(
     blas: IntArray,
     how: np.uint8,
     side: int,
-    triangle: np.uint64,
+    packed: FloatArray,
+    square: FloatArray,
     n_right: int,
     stride: int,
     x: np.uint64,
 ) -> None:
-    """X <- L^-1 x or L^-T x."""
+    """X <- L^-1 x or L^-T x; `square` is work space."""
     if n_right == 1:
-        call(blas[DTRSV], (_LOWER, how, _NO, side, triangle, side, x, 1))
+        call(blas[DTPSV], (_LOWER, how, _NO, side, packed.ctypes.data, x, 1))
     else:
+        _unpack(side, packed, square)
         sizes = (_LEFT, _LOWER, how, _NO, side, n_right)
-        call(blas[DTRSM], (*sizes, 1.0, triangle, side, x, stride))
+        call(blas[DTRSM], (*sizes, 1.0, square.ctypes.data, side, x, stride))
 
 
 @kernel
@@ -303,9 +328,10 @@ def solve_blocks(
 ) -> None:
     """Solve H x = r in place; `right` is C-ordered, shape (n_right, n_unknowns)."""
     n_right, stride = right.shape
-    x, c, a = right.ctypes.data, coupling.ctypes.data, factor.ctypes.data
-    if n_right == 0:
+    x, c = right.ctypes.data, coupling.ctypes.data
+    if n_right == 0 or stride == 0:
         return
+    square = np.empty(size.max() ** 2)
     for block in range(len(size) - 1, -1, -1):  # y_l = L^-1 (r_l + X_l y_{l+1})
         side, own = size[block], _at(x, start[block])
         above = size[block + 1] if block + 1 < len(size) else 0
@@ -314,8 +340,8 @@ def solve_blocks(
             matrix = _at(c, coupling_start[block])
             _add_product(blas, _TRANSPOSED, shape, matrix, n_right, stride, known, own)
         if side:
-            triangle = _at(a, factor_start[block])
-            _solve_triangle(blas, _NO, side, triangle, n_right, stride, own)
+            triangle = factor[factor_start[block] :]
+            _solve_triangle(blas, _NO, side, triangle, square, n_right, stride, own)
     for block in range(len(size)):  # x_l = L^-T (y_l + X_{l-1}^T x_{l-1})
         side, own = size[block], _at(x, start[block])
         below = size[block - 1] if block else 0
@@ -324,5 +350,5 @@ def solve_blocks(
             matrix = _at(c, coupling_start[block - 1])
             _add_product(blas, _NO, shape, matrix, n_right, stride, known, own)
         if side:
-            triangle = _at(a, factor_start[block])
-            _solve_triangle(blas, _TRANSPOSED, side, triangle, n_right, stride, own)
+            triangle = factor[factor_start[block] :]
+            _solve_triangle(blas, _TRANSPOSED, side, triangle, square, n_right, stride, own)

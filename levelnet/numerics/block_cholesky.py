@@ -36,7 +36,7 @@ class BlockCholesky:
     coupling : ndarray, shape (shape.n_couplings,)
         X = B L^-T of every block.
     factor : ndarray, shape (shape.n_factors,)
-        Lower triangles L of every block, Fortran-ordered; what stands above them means nothing.
+        Lower triangles L of every block, packed column by column.
     """
 
     shape: BlockShape

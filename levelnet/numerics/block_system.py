@@ -27,7 +27,7 @@ class BlockShape:
         Where the coupling of block l (rows) to block l + 1 (columns), C-ordered, begins in its
         buffer.
     factor_start : ndarray of int, shape (n_blocks,)
-        Where the square of block l begins in the buffer of factors.
+        Where the packed triangle of block l begins in the buffer of factors.
     """
 
     size: IntArray
@@ -43,7 +43,7 @@ class BlockShape:
             size,
             _starts(size),
             _starts(size[:-1] * size[1:]),
-            _starts(size**2),
+            _starts(size * (size + 1) // 2),
         )
 
     @property
@@ -59,18 +59,13 @@ class BlockShape:
     @property
     def n_factors(self) -> int:
         """Length of a buffer of factors."""
-        return int((self.size**2).sum())
+        return int((self.size * (self.size + 1) // 2).sum())
 
     def coupling(self, buffer: FloatArray, block: int) -> FloatArray:
         """View of the coupling of `block` to `block` + 1, shape (size[block], size[block + 1])."""
         rows, columns = self.size[block], self.size[block + 1]
         begin = self.coupling_start[block]
         return buffer[begin : begin + rows * columns].reshape(rows, columns)
-
-    def factor(self, buffer: FloatArray, block: int) -> FloatArray:
-        """View of the square of `block`, Fortran-ordered as LAPACK wants it."""
-        side, begin = self.size[block], self.factor_start[block]
-        return buffer[begin : begin + side * side].reshape(side, side).T
 
     def slice(self, block: int) -> slice:
         """Where the unknowns of `block` stand in a vector."""
