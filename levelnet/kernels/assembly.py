@@ -115,12 +115,12 @@ def symmetric_blocks(
     shift: FloatArray,
     live: FloatArray,
     sink: FloatArray,
-    upward: FloatArray,
+    scale: FloatArray,
     downward: FloatArray,
     diagonal: FloatArray,
     coupling: FloatArray,
 ) -> None:
-    """Fill the coupling buffer B, the total outflow D and the outflow to the block below.
+    """Fill the coupling buffer, the total outflow D and the outflow to the block below.
 
     Block l holds the levels n = first_n[l] .. top of angular momentum l; n_unknowns in all. Whole
     shells, above `top`, have no place here: what goes to them is in `sink`.
@@ -142,14 +142,16 @@ def symmetric_blocks(
         Square root of the Boltzmann weight; energy above the non-relativistic one over kT; 0 for
         a level that takes no part, else 1; outflow to kept levels, whole shells and the continuum
         in s^-1, positive where live is 0.
-    upward, downward : ndarray, shape (n_unknowns,)
-        Work space; on exit `downward` is the outflow to block l - 1, scaled.
+    scale : ndarray, shape (n_unknowns,)
+        On exit 1 / sqrt(D).
+    downward : ndarray, shape (n_unknowns,)
+        On exit the outflow to block l - 1, scaled.
     diagonal : ndarray, shape (n_unknowns,)
         D, total outflow of each level, s^-1.
     coupling : ndarray
-        B = S / sqrt(D D'), S the geometric mean of the two directions of each line.
+        S, the geometric mean of the two directions of each line, s^-1; scaled from both sides it is
+        the B of :mod:`levelnet.numerics.block_cholesky`, which scales it where it is used.
     """
-    n_blocks = first_n.shape[0]
     geometric_means(
         top,
         first_n,
@@ -162,21 +164,14 @@ def symmetric_blocks(
         root_weight,
         shift,
         live,
-        upward,
+        scale,
         downward,
         coupling,
     )
     for i in range(diagonal.shape[0]):
-        diagonal[i] = (upward[i] + downward[i]) / root_weight[i] + sink[i]
-        upward[i] = 1.0 / math.sqrt(diagonal[i])
-        downward[i] *= upward[i]
-    for l in range(n_blocks - 1):
-        above = top + 1 - first_n[l + 1]
-        for i in range(top + 1 - first_n[l]):
-            scale = upward[start[l] + i]
-            begin = coupling_start[l] + i * above
-            for j in range(above):
-                coupling[begin + j] *= scale * upward[start[l + 1] + j]
+        diagonal[i] = (scale[i] + downward[i]) / root_weight[i] + sink[i]
+        scale[i] = 1.0 / math.sqrt(diagonal[i])
+        downward[i] *= scale[i]
 
 
 @kernel

@@ -190,6 +190,16 @@ def _fold_in(
 
 
 @kernel
+def _scale(n_rows: int, row_scale: FloatArray, column_scale: FloatArray, rows: FloatArray) -> None:
+    """Scale a C-ordered block from both sides."""
+    side = len(column_scale)
+    for i in range(n_rows):
+        row, own = rows[i * side : (i + 1) * side], row_scale[i]
+        for j in range(side):
+            row[j] *= own * column_scale[j]
+
+
+@kernel
 def _set_diagonal(
     blas: IntArray,
     side: int,
@@ -219,6 +229,7 @@ def factor_blocks(
     start: IntArray,
     coupling_start: IntArray,
     factor_start: IntArray,
+    scale: FloatArray,
     weight: FloatArray,
     outflow: FloatArray,
     excess: FloatArray,
@@ -227,8 +238,8 @@ def factor_blocks(
 ) -> int:
     """Factor I - (B + B^T), high blocks first, with the conserving diagonal.
 
-    On entry `coupling` holds B (all entries >= 0), on exit X = B L^-T; `excess` is used up. Returns
-    0, or 1 + l where block l is not positive definite.
+    On entry `coupling` holds B but for `scale` on both sides (all entries >= 0), on exit X = B
+    L^-T; `excess` is used up. Returns 0, or 1 + l where block l is not positive definite.
     """
     largest = size.max() if len(size) else 0
     inverse = np.empty(PANEL * (PANEL + largest))
@@ -243,6 +254,7 @@ def factor_blocks(
             x0, w0 = coupling_start[block], start[block + 1]
             rows = coupling[x0 : x0 + side * above]
             high, passed = squares[1 - block % 2, : above * above], excess[w0 : w0 + above]
+            _scale(side, scale[v0 : v0 + side], scale[w0 : w0 + above], rows)
             _fold_in(blas, above, side, high, inverse, passed, rows, own, leak)
         else:
             own[:] = 0.0

@@ -266,15 +266,13 @@ def _factor_blocks(
 ) -> tuple[BlockCholesky, FloatArray]:
     """Factor the blocks of levels resolved in l; what they lose to whole shells is in `sink`."""
     shape = ladder.interior.shape
-    upward, downward, diagonal = np.empty((3, shape.n_unknowns))
+    scale, downward, diagonal = np.empty((3, shape.n_unknowns))
     lines = block_lines(ladder, tables, root, kt_ev)
-    symmetric_blocks(*lines, sink, upward, downward, diagonal, work.coupling)
+    symmetric_blocks(*lines, sink, scale, downward, diagonal, work.coupling)
     if np.any(diagonal <= 0.0):
         raise SolveError(Outcome.SINGULAR.value)
-    scale = np.sqrt(diagonal)
-    solver = factor_symmetric(
-        shape, work.coupling, root * scale, downward, sink * root / scale, work.factor
-    )
+    weight, excess = root * np.sqrt(diagonal), sink * root * scale
+    solver = factor_symmetric(shape, work.coupling, weight, downward, excess, work.factor, scale)
     return solver, diagonal
 
 

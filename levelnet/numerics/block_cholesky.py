@@ -68,8 +68,9 @@ def factor_symmetric(
     outflow: FloatArray,
     excess: FloatArray,
     factor: FloatArray | None = None,
+    scale: FloatArray | None = None,
 ) -> BlockCholesky:
-    """Factor H = I - (B + B^T).
+    """Factor H = I - (B + B^T), or I - diag(s) (B + B^T) diag(s).
 
     Parameters
     ----------
@@ -85,6 +86,9 @@ def factor_symmetric(
         c = H v, nonnegative.
     factor : ndarray, shape (shape.n_factors,), optional
         Buffer to reuse; touching fresh memory costs more than the arithmetic of small blocks.
+    scale : ndarray, shape (n_unknowns,), optional
+        s, positive: what B lacks yet. It is applied to each block as it is used, which saves a
+        passage of the whole through memory. None: B lacks nothing.
 
     Returns
     -------
@@ -99,9 +103,10 @@ def factor_symmetric(
     if len(excess) and not (np.isfinite(excess).all() and (excess > 0.0).any()):
         raise SolveError(f"{Outcome.SINGULAR.value} (block l = 0)")
     factor = np.empty(shape.n_factors) if factor is None else factor
+    scale = np.ones(len(weight)) if scale is None else scale
     carried = excess.copy()
     status = factor_blocks(
-        blas_addresses(), *_layout(shape), weight, outflow, carried, coupling, factor
+        blas_addresses(), *_layout(shape), scale, weight, outflow, carried, coupling, factor
     )
     if status:
         raise SolveError(f"{Outcome.SINGULAR.value} (block l = {status - 1})")

@@ -31,7 +31,7 @@ def assembled(ladder: Ladder, kelvin: float, kernel: Any) -> dict[str, np.ndarra
     weight = ladder.levels.statistical_weight[inside.position]
     root = np.sqrt(weight * np.exp(-(energy - energy.min()) / kt))
     n = inside.shape.n_unknowns
-    up, down, diagonal = (np.full(n, np.nan) for _ in range(3))
+    scale, down, diagonal = (np.full(n, np.nan) for _ in range(3))
     coupling = np.full(inside.shape.n_couplings, np.nan)
     kernel(
         ladder.n_max,
@@ -45,12 +45,18 @@ def assembled(ladder: Ladder, kelvin: float, kernel: Any) -> dict[str, np.ndarra
         ladder.energy_excess_ev[inside.position] / kt,
         np.where(inside.idle, 0.0, 1.0),
         np.full(n, 3.0),
-        up,
+        scale,
         down,
         diagonal,
         coupling,
     )
-    return {"coupling": coupling, "diagonal": diagonal, "downward": down, "root": root}
+    return {
+        "coupling": coupling,
+        "scale": scale,
+        "diagonal": diagonal,
+        "downward": down,
+        "root": root,
+    }
 
 
 def both_directions(ladder: Ladder, kelvin: float) -> np.ndarray:
@@ -106,6 +112,7 @@ def test_against_line_by_line_rates(kept: Any, energies: str, kelvin: float) -> 
         columns = np.flatnonzero(inside.l == block + 1)
         part = symmetric[np.ix_(rows, columns)]
         computed = inside.shape.coupling(found["coupling"], block)
+        computed = computed * np.multiply.outer(found["scale"][rows], found["scale"][columns])
         np.testing.assert_allclose(computed, part, rtol=tolerance)
         below[columns] = part.T @ vector[rows]
     np.testing.assert_allclose(found["downward"], below, rtol=tolerance)

@@ -224,6 +224,22 @@ def test_a_buffer_in_use_leaves_nothing_of_its_contents() -> None:
         assert np.shares_memory(reused.factor, buffer)
 
 
+@pytest.mark.parametrize("sizes", [[4, 3, 2], [SMALL + 5, 0, 3], [30, 29, 28]], ids=str)
+def test_a_scale_that_the_couplings_lack(sizes: list[int]) -> None:
+    rng = np.random.default_rng(12)
+    network, right = symmetric_network(sizes, rng), rng.random((2, sum(sizes)))
+    scale, bare = rng.uniform(0.1, 10.0, sum(sizes)), network.coupling.copy()
+    for block in range(len(sizes) - 1):
+        rows, columns = network.shape.slice(block), network.shape.slice(block + 1)
+        part = network.shape.coupling(bare, block)
+        part /= np.multiply.outer(scale[rows], scale[columns])
+    scaled = factor_symmetric(
+        network.shape, bare, network.weight, network.outflow, network.excess, scale=scale
+    )
+    expected = network.factor().solve(right)
+    np.testing.assert_allclose(scaled.solve(right), expected, rtol=100 * ROUND_OFF)
+
+
 def test_inputs_are_left_alone() -> None:
     network = symmetric_network([4, 3], np.random.default_rng(1))
     copies = [part.copy() for part in network[2:]]
