@@ -98,7 +98,8 @@ class General(NamedTuple):
     sink: np.ndarray
 
     def factor(self) -> BlockLU:
-        return factor_general(self.shape, self.upward, self.downward, self.sink)
+        rates = ([one.copy() for one in side] for side in (self.upward, self.downward))
+        return factor_general(self.shape, *rates, self.sink)
 
     def rates(self) -> np.ndarray:
         size = self.shape.n_unknowns

@@ -29,6 +29,7 @@ from ..arrays import FloatArray
 from ..atomic.overrides import Override
 from ..atomic.species import Hydrogen
 from ..errors import SolveError
+from ..network.assembly import COLD_K, Workspace
 from ..network.ladder import Ladder, hydrogen_ladder
 from ..network.rates import RateConstants, rate_constants, stack
 from ..network.reduction import Pairs, exchange_pairs, reduce_at
@@ -92,6 +93,24 @@ def prepared(atom: Atom) -> tuple[Ladder, Pairs, RateConstants]:
     return ladder, pairs, rate_constants(ladder, pairs)
 
 
+class _Buffers(threading.local):
+    """Buffers of one thread, which uses them for one reduction of an atom after the other."""
+
+    atom: Atom | None = None
+    workspace: Workspace | None = None
+
+    def of(self, atom: Atom) -> Workspace:
+        if self.workspace is None or self.atom != atom:
+            self.atom, self.workspace = atom, Workspace.of(prepared(atom)[0])
+        return self.workspace
+
+    def drop(self) -> None:
+        self.atom = self.workspace = None
+
+
+_buffers = _Buffers()
+
+
 @functools.lru_cache(maxsize=4)
 def outline(atom: Atom) -> tuple[Ladder, Pairs, RateConstants]:
     """Kept levels, pairs and constants of an atom, the same bits without its highest levels.
@@ -116,7 +135,10 @@ def compute_node(atom: Atom, temperature_k: float) -> dict[str, FloatArray]:
     """
     with threadpool_limits(limits=1, user_api="blas"):
         ladder, pairs, _ = prepared(atom)
-        return {"node": stack(reduce_at(ladder, pairs, temperature_k))}
+        if temperature_k < COLD_K:  # without symmetry they are of no use, and stand in the way
+            _buffers.drop()
+            return {"node": stack(reduce_at(ladder, pairs, temperature_k))}
+        return {"node": stack(reduce_at(ladder, pairs, temperature_k, _buffers.of(atom)))}
 
 
 def process_pool(workers: int) -> ProcessPoolExecutor:

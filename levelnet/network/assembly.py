@@ -39,9 +39,9 @@ from .line_rates import (
 SymmetricSolver = BlockCholesky | BorderedCholesky
 GeneralSolver = BlockLU | BorderedLU
 
-# sqrt(w) spans e^(1.51 eV / 2kT), which reaches e^320 here; doubles end at e^709 and products of
+# sqrt(w) spans e^(1.51 eV / 2kT), which reaches e^326 here; doubles end at e^709 and products of
 # two such factors occur.
-COLD_K = 27.4
+COLD_K = 26.9
 
 
 @dataclass(frozen=True, slots=True, eq=False)

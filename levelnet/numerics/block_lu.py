@@ -93,9 +93,9 @@ def factor_general(
     shape : BlockShape
         Blocks.
     upward : list of ndarray, s^-1
-        Rates from block l to l + 1, shape (size[l], size[l + 1]).
+        Rates from block l to l + 1, shape (size[l], size[l + 1]); overwritten, kept by the result.
     downward : list of ndarray, s^-1
-        Rates from block l + 1 to l, shape (size[l + 1], size[l]).
+        Rates from block l + 1 to l, shape (size[l + 1], size[l]); likewise.
     sink : ndarray, shape (n_unknowns,), s^-1
         Outflow of each unknown from the network.
 
@@ -118,8 +118,9 @@ def factor_general(
     leaks = np.isfinite(sink).all() and (sink > 0.0).any()
     if len(sink) and not (leaks and np.all(diagonal > 0.0)):
         raise SolveError(f"{Outcome.SINGULAR.value} (block l = 0)")
-    up = [u / shape.part(diagonal, k)[:, None] for k, u in enumerate(upward)]
-    down = [d / shape.part(diagonal, k + 1)[:, None] for k, d in enumerate(downward)]
+    for k in range(n_blocks - 1):
+        upward[k] /= shape.part(diagonal, k)[:, None]
+        downward[k] /= shape.part(diagonal, k + 1)[:, None]
     excess, below = sink / diagonal, to_below / diagonal
     factors: list[tuple[FloatArray, IntArray]] = [
         (np.zeros((0, 0)), np.zeros(0, np.int64))
@@ -132,12 +133,12 @@ def factor_general(
         leak = shape.part(excess, block)
         if block + 1 < n_blocks and shape.size[block + 1]:
             above = factors[block + 1]
-            own -= up[block] @ lapack.dgetrs(*above, down[block])[0]
-            leak += up[block] @ lapack.dgetrs(*above, shape.part(excess, block + 1))[0]
+            own -= upward[block] @ lapack.dgetrs(*above, downward[block])[0]
+            leak += upward[block] @ lapack.dgetrs(*above, shape.part(excess, block + 1))[0]
         np.fill_diagonal(own, 0.0)
         np.fill_diagonal(own, leak + shape.part(below, block) - own.sum(axis=1))
         lu, pivots, status = lapack.dgetrf(own)
         if status:
             raise SolveError(f"{Outcome.SINGULAR.value} (block l = {block})")
         factors[block] = (lu, pivots)
-    return BlockLU(shape, diagonal, up, down, factors)
+    return BlockLU(shape, diagonal, upward, downward, factors)

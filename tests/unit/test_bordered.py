@@ -89,8 +89,8 @@ class Bordered(NamedTuple):
         up, down = [], []
         for block in range(len(self.shape.size) - 1):
             rows, columns = block_range(self.shape, block), block_range(self.shape, block + 1)
-            up.append(self.rates[rows, columns])
-            down.append(self.rates[columns, rows])
+            up.append(self.rates[rows, columns].copy())
+            down.append(self.rates[columns, rows].copy())
         border = BorderRates(
             self.rates[inner, high].T, self.rates[high, inner], self.rates[high, high]
         )
