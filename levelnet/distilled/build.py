@@ -113,7 +113,7 @@ def distill(  # noqa: PLR0913  choices by name, each with a default
     if radiation_range_k is None:
         radiation_range_k = default_range_k(setup)
     ranges = _ranges(radiation_range_k, ratio_range)
-    check_memory(setup, workers)
+    check_memory(setup, workers, populations=0, coldest_k=radiation_range_k[0])
     tell = progress or (lambda stage, fraction: None)
     atom = Atom.of(setup.hydrogen, choice, setup.rates.network)
     tell("atomic data", 0.0)

@@ -107,12 +107,13 @@ def effective_rates(
     110.
     """
     atom = Atom.of(setup.hydrogen, choose_kept(setup, kept), setup.rates.network)
-    check_memory(setup)
     factor = scales(setup.physics)
     radiation, matter = np.broadcast_arrays(
         _temperature("radiation_temperature_k", radiation_temperature_k, factor.energy),
         _temperature("matter_temperature_k", matter_temperature_k, factor.energy),
     )
+    coldest_k = float(radiation.min(initial=np.inf))
+    check_memory(setup, populations=0, coldest_k=coldest_k)
     ladder, _, constants = prepared(atom)
     n = len(atom.kept)
     capture, photo = np.empty((2, *radiation.shape, n))

@@ -6,12 +6,13 @@ import math
 from dataclasses import dataclass
 
 from ..errors import InputError
+from ..network.assembly import COLD_K
 from ..network.tabulation import node_count
 from .setup import Setup
 
 # Measured on one core of a 2 GHz-class x86-64 server: sustained rate of the factorization for large
 # blocks, and the overhead per block and per evaluation. Good to a factor of two or three.
-_FLOP_PER_S = 2.0e10
+_FLOP_PER_S = 4.0e10
 _SECONDS_PER_BLOCK = 6e-5
 _SECONDS_PER_EVALUATION = 2.5e-4
 _SECONDS_PER_BORDER_LINE = 1e-8
@@ -48,14 +49,21 @@ class Cost:
     seconds: float
 
 
-def estimate(setup: Setup, populations: int | None = None, reduced: bool = False) -> Cost:
+def estimate(
+    setup: Setup,
+    populations: int | None = None,
+    reduced: bool = False,
+    coldest_k: float | None = None,
+) -> Cost:
     """Estimate memory and time of a run from its sizes.
 
     `populations` is the number of redshifts at which every level is solved for, all outputs by
-    default; `reduced` says that the reduced network is there already.
+    default; `reduced` says that the reduced network is there already; `coldest_k` is the lowest
+    T_r of a reduction, that of the last output by default.
 
-    Three cubes of n_max^3/3 numbers (line strengths, couplings, factors), the cross sections, and
-    the populations at every output redshift. With whole shells, the strengths of every line are
+    Cubes of n_max^3/3 numbers (line strengths, couplings, and triangles of half as many; below the
+    coldest T_r of the symmetric form three instead of the last two), the cross sections, and the
+    populations at every output redshift. With whole shells, the strengths of every line are
     needed still, to be averaged; the cubes of what is resolved, and the border, come on top.
     Overrides of rates take a copy of the strengths. Helium, where it recombines, adds its own: He I
     with two ladders, He II like hydrogen; its tables are made even where hydrogen is reduced at
@@ -65,7 +73,9 @@ def estimate(setup: Setup, populations: int | None = None, reduced: bool = False
     n_out = len(setup.grid.redshifts or ()) or setup.grid.n_redshifts
     border = (n - top) * top**2 / 2.0
     copies = 2.0 if setup.rates.network else 1.0
-    cubes = 8.0 * (copies * n**3 + (2.0 if top == n else 3.0) * top**3) / 3.0
+    low = setup.cosmology.cmb_temperature_k * (1.0 + setup.grid.redshift_end)
+    factored = 3.0 if (coldest_k or low) < COLD_K else 1.5
+    cubes = 8.0 * (copies * n**3 + (factored + (top < n)) * top**3) / 3.0
     cubes += _BORDERS * 8.0 * border
     # Of He I and He II: both spins, and half as many.
     helium = 1.5 * setup.helium.n_max**2 * setup.helium_recombines
@@ -73,7 +83,6 @@ def estimate(setup: Setup, populations: int | None = None, reduced: bool = False
     levels = 5 * 8.0 * solved * (top**2 / 2.0 + n - top + helium)
     more_bytes, more_s = _of_helium(setup, solved, reduced)
     memory = cubes + 400.0 * n**2 + levels + more_bytes + _RESERVE_BYTES
-    low = setup.cosmology.cmb_temperature_k * (1.0 + setup.grid.redshift_end)
     tabulated = setup.accuracy.interpolate and not reduced
     nodes = node_count(low, 6000.0, table_tolerance(setup)) + 7 if tabulated else 0
     node = node_seconds(setup)
@@ -126,16 +135,21 @@ def table_tolerance(setup: Setup) -> float:
 
 
 def check_memory(
-    setup: Setup, copies: int = 1, more_bytes: float = 0.0, populations: int | None = None
+    setup: Setup,
+    copies: int = 1,
+    more_bytes: float = 0.0,
+    populations: int | None = None,
+    coldest_k: float | None = None,
 ) -> Cost:
     """Estimate the cost; InputError with the figure if it cannot fit or n_max is out of range.
 
     With `copies` worker processes, each of which holds an atom of its own, all must fit at once;
-    `more_bytes` is what else the caller will hold, `populations` as for :func:`estimate`.
+    `more_bytes` is what else the caller will hold, `populations` and `coldest_k` as for
+    :func:`estimate`.
     """
     if copies < 1:
         raise InputError(f"workers = {copies}: at least 1 is needed")
-    cost = estimate(setup, populations)
+    cost = estimate(setup, populations, coldest_k=coldest_k)
     cost = Cost(cost.memory_bytes + more_bytes, cost.seconds)
     check_fits(setup, copies * cost.memory_bytes, copies)
     return cost

@@ -152,3 +152,10 @@ def test_a_system_that_does_not_say_refuses_nothing(
 )
 def test_sizes_in_words(size: float, text: str) -> None:
     assert cost._readable(size) == text
+
+
+def test_without_symmetry_an_atom_takes_more() -> None:
+    # Closed form: three cubes of n^3/3 numbers instead of one and a half.
+    setup = small_setup(100)
+    warm, cold = (estimate(setup, 0, coldest_k=kelvin).memory_bytes for kelvin in (30.0, 20.0))
+    assert cold - warm == pytest.approx(1.5 * 8.0 * 100**3 / 3.0)
