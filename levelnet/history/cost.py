@@ -62,8 +62,8 @@ def estimate(
     T_r of a reduction, that of the last output by default.
 
     Cubes of n_max^3/3 numbers (line strengths, couplings, and triangles of half as many; below the
-    coldest T_r of the symmetric form three instead of the last two), the cross sections, and the
-    populations at every output redshift. With whole shells, the strengths of every line are
+    coldest T_r of the symmetric form three and a half instead of the last two), the cross sections,
+    and the populations at every output redshift. With whole shells, the strengths of every line are
     needed still, to be averaged; the cubes of what is resolved, and the border, come on top.
     Overrides of rates take a copy of the strengths. Helium, where it recombines, adds its own: He I
     with two ladders, He II like hydrogen; its tables are made even where hydrogen is reduced at
@@ -74,7 +74,7 @@ def estimate(
     border = (n - top) * top**2 / 2.0
     copies = 2.0 if setup.rates.network else 1.0
     low = setup.cosmology.cmb_temperature_k * (1.0 + setup.grid.redshift_end)
-    factored = 3.0 if (coldest_k or low) < COLD_K else 1.5
+    factored = 3.5 if (coldest_k or low) < COLD_K else 1.5
     cubes = 8.0 * (copies * n**3 + (factored + (top < n)) * top**3) / 3.0
     cubes += _BORDERS * 8.0 * border
     # Of He I and He II: both spins, and half as many.
