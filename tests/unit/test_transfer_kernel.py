@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import math
 import time
-from typing import Any
 
 import mpmath
 import numpy as np
