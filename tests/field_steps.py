@@ -17,7 +17,7 @@ from levelnet.escape.lines import Lines
 from levelnet.escape.resolved import ResolvedField
 from levelnet.history.atom import build_ladder, resonance_lines
 from levelnet.history.equations import SlowEquations
-from levelnet.history.field import make_room
+from levelnet.history.march import make_room
 from levelnet.history.march_path import make_path
 from levelnet.history.setup import Setup
 from levelnet.kernels import transfer as kernel

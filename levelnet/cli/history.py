@@ -12,6 +12,7 @@ from ..errors import InputError, RangeError
 from .console import Console
 from .output import print_result
 from .paths import check_target
+from .solve import cache_pieces
 from .table_output import distilled_summary, distilled_values
 
 if TYPE_CHECKING:
@@ -67,6 +68,12 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
         nargs="+",
         help="output redshifts (default: 2000 over the range of the setup's grid)",
     )
+    parser.add_argument(
+        "--no-cache",
+        action="store_true",
+        help="neither read nor fill the cache, where a radiation field resolved in frequency keeps "
+        "what takes long",
+    )
     parser.add_argument("--force", action="store_true", help="overwrite the output file")
 
 
@@ -78,7 +85,8 @@ def run(options: argparse.Namespace, console: Console) -> int:
 
     table = read_table(options.table)
     setup = chosen_setup(table, options)
-    history = _history(table, setup, options)
+    pieces = None if options.no_cache else cache_pieces(console)
+    history = _history(table, setup, options, pieces)
     written = _write(history, setup, options)
     if options.output == "-":
         return 0
@@ -176,7 +184,9 @@ def _given(options: argparse.Namespace, names: dict[str, str]) -> dict[str, floa
     return {name: value for name, value in values.items() if value is not None}
 
 
-def _history(table: EffectiveTable, setup: Setup, options: argparse.Namespace) -> FastHistory:
+def _history(
+    table: EffectiveTable, setup: Setup, options: argparse.Namespace, pieces: Any
+) -> FastHistory:
     from ..distilled.history import history_from_table
 
     redshifts: Any = options.redshifts
@@ -195,6 +205,7 @@ def _history(table: EffectiveTable, setup: Setup, options: argparse.Namespace) -
             observables=True,
             fine_structure_change=setup.physics.fine_structure_change,
             electron_mass_change=setup.physics.electron_mass_change,
+            pieces=pieces,
         )
     except RangeError as error:
         raise RangeError(f"{options.table}: {error}") from None

@@ -26,6 +26,7 @@ from ..kernels.effective import (
     Atom,
     effective_history,
 )
+from ..pieces import Pieces
 from .fast import FastHistory, Sensitivities, fractions
 from .kept import check_helium, recombines
 from .observables import Observables, observe_electrons, observe_run, table_quadrature
@@ -81,6 +82,7 @@ def history_from_table(  # noqa: PLR0913 (each is a choice of the caller)
     rate_scales: Mapping[str, float] | None = None,
     fine_structure_change: float | None = None,
     electron_mass_change: float | None = None,
+    pieces: Pieces | None = None,
 ) -> FastHistory:
     """Compute the history of one cosmology from a table of effective rates.
 
@@ -109,6 +111,9 @@ def history_from_table(  # noqa: PLR0913 (each is a choice of the caller)
         Factors on effective rates, named as :func:`rate_names` names them.
     fine_structure_change, electron_mass_change : float, -0.2 to 0.2 (dimensionless), optional
         Relative changes of constants; None: those of the table.
+    pieces : Pieces, optional
+        Where a resolved field keeps what takes long, such as
+        ``levelnet.pieces.FolderPieces(folder)``: a run that was killed goes on, to the same bits.
 
     Returns
     -------
@@ -152,7 +157,7 @@ def history_from_table(  # noqa: PLR0913 (each is a choice of the caller)
         setup = field_setup(
             table, cosmology, chosen, two_photon_rate_per_s, relative, physics, redshift
         )
-        return history_with_field(table, setup, redshift, observables)
+        return history_with_field(table, setup, redshift, observables, pieces)
     factors = scale_factors(table, rate_scales)
     atom = make_atom(table, lines, two_photon_rate_per_s, physics, factors)
     _check_range(atom, cosmology, redshift)

@@ -19,6 +19,7 @@ from ..history.course import Course, electron_fraction_at, state_at
 from ..history.integrate import handover_of, march_field, slow_equations
 from ..history.limits import field_notes
 from ..history.setup import Accuracy, Grid, Setup
+from ..pieces import Pieces
 from .fast import FastHistory, fractions
 from .kept import check_kept
 from .observables import Observables, observe_electrons
@@ -65,7 +66,11 @@ def field_setup(
 
 
 def history_with_field(
-    table: EffectiveTable, setup: Setup, redshift: FloatArray, observables: bool
+    table: EffectiveTable,
+    setup: Setup,
+    redshift: FloatArray,
+    observables: bool,
+    pieces: Pieces | None,
 ) -> FastHistory:
     """March a history with its field through the interior that a table holds.
 
@@ -79,12 +84,14 @@ def history_with_field(
         Output redshifts, descending.
     observables : bool
         Also give z_*, r_s and k_D.
+    pieces : Pieces or None
+        Where stretches of a long march are kept.
     """
     changes = setup.physics.fine_structure_change, setup.physics.electron_mass_change
     equations = slow_equations(setup, table.with_constants(*changes))
     handover = handover_of(setup, equations)
     run = march_field(
-        setup, equations, (handover, handover), redshift, lambda stage, fraction: None
+        setup, equations, (handover, handover), redshift, lambda stage, fraction: None, pieces
     )
     outcome = run.trajectory.outcome
     if not outcome.ok:

@@ -1,12 +1,13 @@
 """A run whose radiation field is resolved in frequency: one march of field, levels and ionization.
 
-The march itself needs no network (`history/march_path.py`). Helium is taken from the reference
-history: what the field does to hydrogen does not reach it.
+The march itself (`history/march.py`) needs no network (`history/march_path.py`). Helium is taken
+from the reference history: what the field does to hydrogen does not reach it.
 """
 
 from __future__ import annotations
 
 import math
+from collections.abc import Callable
 from dataclasses import replace
 from typing import NamedTuple
 
@@ -15,26 +16,24 @@ from scipy.interpolate import CubicSpline
 
 from ..arrays import FloatArray
 from ..atomic.physics import scales
-from ..errors import Outcome, SolveError
 from ..escape.cells import frequency_cells
 from ..escape.frequency_step import fitted_step
 from ..escape.resolved import FieldRecord, ResolvedField, log_distortion
 from ..kernels import transfer as kernel
-from ..kernels.transfer import Cells, Path, Room, Track
+from ..kernels.transfer import Cells, Path
 from ..numerics.stepping import Trajectory
+from ..pieces import Pieces
 from .equations import SlowEquations
+from .march import Marched, Way, make_way, march
 from .march_path import make_path
 from .result import RadiationField
 from .setup import Setup
 
-# ln a between records of what the field does, and between points of the trajectory; both are
-# interpolated in between.
-_RECORD, _POINTS = 1e-3, 2e-3
+# ln a between points of the trajectory, which is interpolated in between.
+_POINTS = 2e-3
 _MOST_SPECTRA = 50
-_MOST_ITERATIONS = 20
-_FEWEST_RECORDS = 4  # for a cubic spline
-# Of the change of x_HI in a step.
-_TOLERANCE = 1e-9
+# A march and its coarser companion that take less together are quickly done again.
+_LONG_S = 40.0
 
 
 class FieldRun(NamedTuple):
@@ -67,95 +66,13 @@ class FieldRun(NamedTuple):
     steps: int
 
 
-class Marched(NamedTuple):
-    """What one march gave.
-
-    Attributes
-    ----------
-    time, state : ndarray, shapes (n_steps + 1,) and (n_steps + 1, 2)
-        ln a, and u and v there.
-    middle : ndarray, shape (n_records,)
-        ln a of the records.
-    spectrum_time : ndarray, shape (n_spectra,)
-        ln a of the spectra.
-    track : Track
-        Records, spectra, report.
-    outcome : Outcome
-        How it ended.
-    """
-
-    time: FloatArray
-    state: FloatArray
-    middle: FloatArray
-    spectrum_time: FloatArray
-    track: Track
-    outcome: Outcome
-
-
-def make_room(cells: Cells) -> Room:
-    """Work space for a grid."""
-    n_levels, n_cells = cells.weight.shape
-    n_scattering = len(cells.conductance) - 1
-    cell, levels = np.zeros((6, n_cells)), np.zeros((2, n_levels, n_cells))
-    return Room(
-        cell[0],
-        cell[1],
-        levels[0],
-        levels[1],
-        cell[2],
-        cell[3],
-        cell[4],
-        cell[5],
-        np.zeros(n_scattering),
-        np.zeros((n_scattering, n_levels + 2)),
-        np.zeros(len(cells.line_cell)),
-    )
-
-
-def march(
-    cells: Cells, path: Path, start: float, state: FloatArray, end: float, spectra: FloatArray
-) -> Marched:
-    """March from equilibrium at `start` past `end` in ln a, keeping the field near `spectra`."""
-    stride = max(1, round(_RECORD / cells.step))
-    # So far beyond that the last record is: K and s change by per cents from one to the next.
-    n_steps = math.ceil((end - start) / cells.step) + stride
-    n_records = (n_steps - 1) // stride + 1
-    n, n_lines = len(path.weight_ratio), len(cells.line_cell)
-    wanted = np.clip(np.rint((spectra - start) / cells.step), 1, n_steps).astype(np.int64)
-    track = Track(
-        np.zeros((n_steps + 1, 2)),
-        np.zeros((n_records, n, n)),
-        np.zeros((n_records, n)),
-        np.zeros((n_records, n_lines, 2)),
-        np.zeros((len(wanted), len(cells.offset))),
-        np.zeros(4),
-    )
-    first = np.array([start, *state])
-    status = kernel.march(
-        cells, path, first, stride, wanted, _TOLERANCE, _MOST_ITERATIONS, make_room(cells), track
-    )
-    if status == kernel.SINGULAR:
-        raise SolveError(Outcome.SINGULAR.value, outcome=Outcome.SINGULAR)
-    done = int(track.report[kernel.STEPS])
-    outcome = Outcome.CONVERGED if status == kernel.DONE else Outcome.FIELD_NOT_SETTLED
-    if done <= _FEWEST_RECORDS * stride:
-        raise SolveError(outcome.value, outcome=outcome)
-    step = np.arange(done + 1, dtype=float)
-    return Marched(
-        start + cells.step * step,
-        track.state[: done + 1],
-        start + cells.step * (step[:done:stride] + 0.5),
-        start + cells.step * wanted[wanted <= done].astype(float),
-        track,
-        outcome,
-    )
-
-
 def resolve_field(
     setup: Setup,
     equations: SlowEquations,
     reference: Trajectory,
     redshift: FloatArray,
+    pieces: Pieces | None,
+    advance: Callable[[float], None],
 ) -> FieldRun:
     """Work out a history together with its field.
 
@@ -169,6 +86,10 @@ def resolve_field(
         Their solution from the start down to the last output, or nearly.
     redshift : ndarray, shape (n_redshift,), dimensionless
         Output redshifts, descending, the last well below the start.
+    pieces : Pieces or None
+        Where stretches of a long march are kept.
+    advance : callable
+        Called now and then with the fraction that is done.
     """
     start, state = float(reference.time[0]), reference.state[0, :2]
     outputs = -np.log1p(redshift)
@@ -182,9 +103,8 @@ def resolve_field(
         end,
         setup.lines.two_photon != "distorted",
     )
-    (cells, marched), (_, coarse) = (
-        _march(setup, equations, path, state, end, step, outputs) for step in (asked, 2.0 * asked)
-    )
+    ways = [_way(setup, equations, path, state, step, outputs) for step in (asked, 2.0 * asked)]
+    marched, coarse = _march(ways, pieces, advance)
     points = _points(marched, outputs)
     recorded = replace(
         equations,
@@ -194,8 +114,8 @@ def resolve_field(
     return FieldRun(
         recorded,
         _trajectory(marched, points, reference),
-        _field(equations, cells, marched),
-        cells.step,
+        _field(equations, ways[0].cells, marched),
+        ways[0].cells.step,
         _frequency_error(marched, coarse, points),
         float(marched.track.report[kernel.PHOTON_ERROR]),
         float(marched.track.report[kernel.ATOM_ERROR]),
@@ -213,15 +133,14 @@ def _frequency_error(fine: Marched, coarse: Marched, points: FloatArray) -> floa
     return float(np.max(np.abs(there / less - 1.0)))
 
 
-def _march(
+def _way(
     setup: Setup,
     equations: SlowEquations,
     path: Path,
     state: FloatArray,
-    end: float,
     asked: float,
     outputs: FloatArray,
-) -> tuple[Cells, Marched]:
+) -> Way:
     factor = scales(setup.physics)
     cells = frequency_cells(
         equations.reduced.kept,
@@ -234,7 +153,23 @@ def _march(
     # Evenly over the outputs, the first and the last among them.
     count = min(len(outputs), _MOST_SPECTRA)
     wanted = outputs[np.unique(np.linspace(0, len(outputs) - 1, count).round().astype(int))]
-    return cells, march(cells, path, path.start, state, end, wanted)
+    return make_way(cells, path, state, float(outputs[-1]), wanted)
+
+
+def _march(
+    ways: list[Way], pieces: Pieces | None, advance: Callable[[float], None]
+) -> list[Marched]:
+    """March each way, one after the other; kept on the way where that takes long."""
+    total = sum(way.seconds for way in ways)
+    kept, before, done = pieces if total > _LONG_S else None, 0.0, []
+
+    def tell(fraction: float) -> None:
+        advance((before + fraction * way.seconds) / total)
+
+    for way in ways:
+        done.append(march(way, kept, tell))
+        before += way.seconds
+    return done
 
 
 def _points(marched: Marched, outputs: FloatArray) -> FloatArray:

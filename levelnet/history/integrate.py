@@ -127,7 +127,7 @@ def integrate_history(
         reduced = _table(setup, ladder, span, tell, pieces)
     equations = slow_equations(setup, with_scales(reduced, factor), chosen, helium)
     if resolved:
-        run = march_field(setup, equations, (handover, begin), redshift, tell)
+        run = march_field(setup, equations, (handover, begin), redshift, tell, pieces)
         found = run.equations, handover, run.trajectory, ladder, redshift, reduced, run
         return Integrated(*found, helium=atoms)
     trajectory = integrate_slow(setup, equations, handover, redshift, tell)
@@ -162,6 +162,7 @@ def march_field(
     handovers: tuple[Handover, Handover],
     redshift: FloatArray,
     tell: Progress,
+    pieces: Pieces | None = None,
 ) -> FieldRun:
     """Integrate with the field: first without it, to know T_m, then everything together.
 
@@ -174,6 +175,8 @@ def march_field(
         Output redshifts, descending.
     tell : callable
         Progress.
+    pieces : Pieces, optional
+        Where stretches of a long march are kept, so that one that was killed goes on.
 
     Raises
     ------
@@ -192,8 +195,9 @@ def march_field(
     tell("radiation field", 0.0)
     first = int(np.argmin(np.abs(reference.time + math.log1p(begin.redshift))))
     later = replace(reference, time=reference.time[first:], state=reference.state[first:])
-    run = resolve_field(setup, equations, later, redshift)
-    tell("radiation field", 1.0)
+    run = resolve_field(
+        setup, equations, later, redshift, pieces, lambda done: tell("radiation field", done)
+    )
     before = reference.time[:first], reference.state[:first]
     whole = replace(
         run.trajectory,

@@ -34,7 +34,8 @@ def solve(
     pieces : Pieces, optional
         Store of reduced networks, such as ``levelnet.pieces.FolderPieces(folder)``; a repeated run
         with the same atom then skips the reduction. Populations that take long are kept there too,
-        output by output: a run that was killed goes on, to the same bits.
+        output by output, and a long march of a resolved field, stretch by stretch: a run that was
+        killed goes on, to the same bits.
     line_treatment : LineTreatment, optional
         A treatment of the resonance lines of your own, in place of the one the setup names.
     strict : bool

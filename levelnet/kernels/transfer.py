@@ -32,6 +32,9 @@ DONE, SINGULAR, NOT_CONVERGED = 0, 1, 2
 HELIUM, LOG_HUBBLE, LOG_LAG, LOG_DECAY = -4, -3, -2, -1
 # Places in the report of a `Track`.
 STEPS, ELIMINATIONS, PHOTON_ERROR, ATOM_ERROR = 0, 1, 2, 3
+# Places in what one step hands on to the next besides the field: changes of x_HI in the last four
+# steps, the latest first, slope of the secant, x_HII and x_HI.
+N_GAINS, SLOPE, IONIZED, NEUTRAL, N_CARRIED = 4, 4, 5, 6, 7
 # Exchange with the neighbours in one step above which the mean of a cell leans to its end, so that
 # the field does not ring for long. Leaning is of first order: at 30 it was worth 3e-5 in x_e on any
 # grid, at 1000 less than 1e-6.
@@ -788,14 +791,17 @@ def march(
     cells: Cells,
     path: Path,
     first: FloatArray,
+    stretch: tuple[int, int],
     stride: int,
     spectrum_steps: IntArray,
-    tolerance: float,
-    most: int,
+    limits: tuple[float, int],
     room: Room,
+    carried: FloatArray,
     track: Track,
 ) -> int:
     """March from equilibrium through time, one cell a step, everything implicit.
+
+    A march may be cut anywhere into calls for one stretch after the other, to the same bits.
 
     Parameters
     ----------
@@ -803,18 +809,20 @@ def march(
         The grid and the way.
     first : ndarray, shape (3,)
         ln a, u and v at the start.
+    stretch : (int, int)
+        Steps done before, and when this call ends; from 0 the march begins.
     stride : int
         Steps from one record to the next.
     spectrum_steps : ndarray of int, ascending
         Steps after which the field is kept.
-    tolerance : float
-        Of the change of x_HI in a step, relative.
-    most : int
-        Iterations allowed in a step.
-    room, track : Room, Track
-        Work space; results.
+    limits : (float, int)
+        Tolerance of the change of x_HI in a step, relative, and the iterations allowed in a step.
+    room, carried : Room; ndarray, shape (7,)
+        Work space, and with `field` and `boltzmann` of the first what a step hands on to the next.
+    track : Track
+        Results.
     """
-    n_steps, n = track.state.shape[0] - 1, path.weight_ratio.shape[0]
+    n = path.weight_ratio.shape[0]
     balance = Balance(
         np.empty(path.series.shape[2]),
         np.empty((n, n)),
@@ -823,12 +831,16 @@ def march(
         np.empty(n),
     )
     sides = np.empty((cells.line_cell.shape[0], 2))
-    gains = np.zeros(4)  # of the last steps, the latest first
-    slope, kept = -1.0, 0
-    track.state[0, 0], track.state[0, 1] = first[1], first[2]
-    begin(cells, path.radiation_kt_ev * math.exp(-first[0] - 0.5 * cells.step), room)
-    fractions = _fractions(first[1])
-    for step in range(n_steps):
+    if stretch[0] == 0:
+        track.state[0, 0], track.state[0, 1] = first[1], first[2]
+        begin(cells, path.radiation_kt_ev * math.exp(-first[0] - 0.5 * cells.step), room)
+        carried[:N_GAINS], carried[SLOPE] = 0.0, -1.0
+        carried[IONIZED], carried[NEUTRAL] = _fractions(first[1])
+    gains, fractions = carried[:N_GAINS], (carried[IONIZED], carried[NEUTRAL])
+    kept = 0
+    while kept < spectrum_steps.shape[0] and spectrum_steps[kept] <= stretch[0]:
+        kept += 1
+    for step in range(stretch[0], stretch[1]):
         middle = first[0] + (step + 0.5) * cells.step
         kt = path.radiation_kt_ev * math.exp(-middle)
         _stored(path, middle, balance.stored)
@@ -842,18 +854,19 @@ def march(
         guess = gains[0]
         if step > 5:  # as a cubic goes on
             guess = 4.0 * gains[0] - 6.0 * gains[1] + 4.0 * gains[2] - gains[3]
-        limits = (tolerance, most)
+        slope = carried[SLOPE]
         attempt = _settle(cells, path, here, fractions, guess, slope, limits, room, balance)
         if not attempt.done:
             return NOT_CONVERGED if attempt.eliminations else SINGULAR
-        slope = attempt.slope
+        carried[SLOPE] = attempt.slope
         moment = _moment(path, attempt.slow)
         gained = advance_field(cells, moment, path.weight_ratio, balance.departure, room, sides)
         _record(step, stride, balance, sides, gained, attempt, track)
-        for k in range(3, 0, -1):
+        for k in range(N_GAINS - 1, 0, -1):
             gains[k] = gains[k - 1]
         gains[0] = attempt.gain
         fractions = (fractions[0] - attempt.gain, fractions[1] + attempt.gain)
+        carried[IONIZED], carried[NEUTRAL] = fractions
         track.state[step + 1, 0] = math.log(fractions[0] / fractions[1])
         track.state[step + 1, 1] = 2.0 * attempt.slow.lag - v
         while kept < spectrum_steps.shape[0] and spectrum_steps[kept] == step + 1:

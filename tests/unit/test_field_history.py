@@ -11,10 +11,9 @@ from levelnet import InputError, SolveError, solve
 from levelnet.errors import Outcome
 from levelnet.escape.resolved import ResolvedField
 from levelnet.history import field as field_run
-from levelnet.history.field import Marched
+from levelnet.history.march import Marched, Way
 from levelnet.history.setup import Setup
 from levelnet.kernels import transfer as kernel
-from levelnet.kernels.transfer import Cells
 from tests.small_runs import small_setup
 
 STEP = 1e-3
@@ -56,9 +55,9 @@ def test_a_march_that_fails_before_there_are_records(monkeypatch: pytest.MonkeyP
 def test_a_coarser_march_that_fails_tells_no_error(monkeypatch: pytest.MonkeyPatch) -> None:
     whole = field_run.march
 
-    def stopping(cells: Cells, *rest: Any) -> Marched:
-        found = whole(cells, *rest)
-        if cells.step <= STEP:
+    def stopping(way: Way, *rest: Any) -> Marched:
+        found = whole(way, *rest)
+        if way.cells.step <= STEP:
             return found
         return found._replace(
             time=found.time[:50], state=found.state[:50], outcome=Outcome.FIELD_NOT_SETTLED

@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import math
 import time
-from typing import Any
 
 import mpmath
 import numpy as np
@@ -13,7 +12,7 @@ from scipy.optimize import brentq
 from scipy.sparse.linalg import splu
 
 from levelnet import constants as const
-from levelnet.history.field import make_room
+from levelnet.history.march import make_room
 from levelnet.kernels import transfer as kernel
 from levelnet.kernels.transfer import Cells, Path, Track
 from tests.field_sparse import random_problem, sparse_step
@@ -182,8 +181,9 @@ def march(cells: Cells, path: Path, steps: int = 3, most: int = 20) -> tuple[int
     )
     first = np.array([path.start, math.log(0.15 / 0.85), math.log(0.98)])
     last = np.array([steps])
-    room: Any = make_room(cells)
-    return kernel.march(cells, path, first, 1, last, 1e-9, most, room, track), track
+    room, carried, limits = make_room(cells), np.zeros(kernel.N_CARRIED), (1e-9, most)
+    status = kernel.march(cells, path, first, (0, steps), 1, last, limits, room, carried, track)
+    return status, track
 
 
 def test_march_ends_well() -> None:

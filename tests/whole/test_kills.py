@@ -18,6 +18,7 @@ from pathlib import Path
 import pytest
 
 from levelnet.cli.main import main
+from levelnet.history import field, march
 from tests.whole.test_command_line import GOOD, environment
 
 KILLS = 7
@@ -122,6 +123,38 @@ def test_kills_at_random_moments(command: str, tmp_path: Path) -> None:
     # A damaged piece would have been computed again and replaced.
     assert known.items() <= pieces(torn).items()
     assert not list(torn.glob("*.part"))
+
+
+@pytest.mark.slow
+def test_a_march_killed_between_its_stretches_goes_on(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """Short stretches instead of a long march; each kill comes when one or two more are kept."""
+    monkeypatch.setattr(field, "_LONG_S", 0.0)
+    monkeypatch.setattr(march, "_STRETCH_S", 0.08)
+    fine = FIELD.replace("frequency_step = 1e-3", "frequency_step = 2e-4")
+    whole, torn = (prepared(tmp_path / name) for name in ("whole", "torn"))
+    for folder in (whole, torn):
+        (folder / "fine.toml").write_text(fine)
+    # The reductions are there already: what comes next are stretches.
+    assert ended(started("solve field.toml --output first.h5", torn)) == 0
+    assert ended(started("solve fine.toml", whole)) == 0
+    expected, known = results(whole), pieces(torn)
+    for kills in range(4):
+        child = started("solve fine.toml", torn)
+        deadline = time.monotonic() + 100.0
+        while len(pieces(torn)) < len(known) + 1 + kills % 2 and time.monotonic() < deadline:
+            time.sleep(0.002)
+        os.kill(child, signal.SIGKILL)
+        assert ended(child) == -signal.SIGKILL
+        there = pieces(torn)
+        # None is written a second time: each run went on where the last one was.
+        assert known.items() < there.items()
+        known = there
+    assert not (torn / "fine.h5").exists()
+    assert ended(started("solve fine.toml", torn)) == 0
+    assert (torn / "fine.h5").read_bytes() == expected["fine.h5"]
+    assert known.items() < pieces(torn).items()
 
 
 @pytest.mark.parametrize(

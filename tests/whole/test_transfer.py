@@ -16,7 +16,7 @@ from levelnet import constants as const
 from levelnet import read, solve, with_expansion, write
 from levelnet.atomic.physics import Physics, scales
 from levelnet.errors import Outcome, SolveError
-from levelnet.history import field as field_module
+from levelnet.history import march as march_module
 from levelnet.history.result import History
 from tests.same_records import assert_same
 from tests.small_runs import COSMOLOGY, small_setup
@@ -254,7 +254,7 @@ def test_down_to_the_coldest_field(on: tuple[str, ...]) -> None:
 
 
 def test_a_march_that_fails_at_once_says_so(monkeypatch: pytest.MonkeyPatch) -> None:
-    monkeypatch.setattr(field_module, "_MOST_ITERATIONS", 1)
+    monkeypatch.setattr(march_module, "_MOST_ITERATIONS", 1)
     with pytest.raises(SolveError) as caught:
         changed()
     assert caught.value.outcome is Outcome.FIELD_NOT_SETTLED

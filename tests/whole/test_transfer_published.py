@@ -23,7 +23,7 @@ import pytest
 from levelnet.arrays import FloatArray
 from levelnet.background.cosmology import Cosmology
 from levelnet.escape.cells import frequency_cells
-from levelnet.history import field
+from levelnet.history import field, march
 from levelnet.history.run import solve
 from levelnet.kernels import transfer
 from levelnet.kernels.transfer import Cells
@@ -129,7 +129,7 @@ def without_recoil(folder: Path) -> ModuleType:
 def test_recoil(monkeypatch: pytest.MonkeyPatch, tmp_path: Path) -> None:
     """About -1.2 per cent near z = 900, on isolated lines (Chluba & Sunyaev 2009)."""
     with_it = x_e("scattering")
-    monkeypatch.setattr(field, "kernel", without_recoil(tmp_path))
+    monkeypatch.setattr(march, "kernel", without_recoil(tmp_path))
     without = solve(field_setup("scattering", **RUN)).free_electron_fraction  # type: ignore[arg-type]
     assert change(without, with_it)[900.0] == pytest.approx(-0.012, abs=WITHIN)
     # Diffusion alone delays recombination: the sum is smaller than recoil.
