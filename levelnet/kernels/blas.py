@@ -8,6 +8,8 @@ next.
 from __future__ import annotations
 
 import functools
+import importlib
+import re
 from typing import Any, cast
 
 import numpy as np
@@ -27,8 +29,17 @@ DGEMM, DGEMV, DSYMV, DSYRK, DTPSV, DTRMM, DTRSM, DTRSV = range(len(_ROUTINES))
 
 @functools.cache
 def blas_addresses() -> NDArray[np.int64]:
-    """Addresses of the routines in this process, in the order of DGEMM, DGEMV, ..."""
+    """Addresses of the routines in this process, in the order of DGEMM, DGEMV, ...
+
+    Raises
+    ------
+    ImportError
+        Where scipy's BLAS counts in other integers than the 32 bits that kernels hand over.
+    """
     library = "scipy.linalg.cython_blas"
+    capsule = repr(importlib.import_module(library).__pyx_capi__["dgemm"])  # names all arguments
+    if not re.search(r"\bint \*", capsule):
+        raise ImportError(f"levelnet needs a scipy whose BLAS has 32-bit integers; found {capsule}")
     return np.array([get_cython_function_address(library, name) for name in _ROUTINES])
 
 

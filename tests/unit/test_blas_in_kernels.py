@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 import numpy as np
+import pytest
+from scipy.linalg import cython_blas
 
 from levelnet.arrays import FloatArray, IntArray
 from levelnet.kernels.blas import DGEMM, DTRSV, blas_addresses, call
@@ -39,6 +41,13 @@ def test_a_part_of_a_product_and_nothing_else() -> None:
     np.testing.assert_allclose(c[:3, :4], expected, rtol=100 * ROUND_OFF)
     before[:3, :4] = c[:3, :4]
     assert np.array_equal(c, before)
+
+
+def test_other_integers_are_refused(monkeypatch: pytest.MonkeyPatch) -> None:
+    routines = {"dgemm": "void (char *, char *, int64_t *, int64_t *, int64_t *, d *)"}
+    monkeypatch.setattr(cython_blas, "__pyx_capi__", routines)
+    with pytest.raises(ImportError, match=r"32-bit integers; found .*int64_t"):
+        blas_addresses.__wrapped__()
 
 
 def test_a_triangle() -> None:
