@@ -17,6 +17,7 @@ from levelnet.network.assembly import FactoredInterior
 
 TEMPERATURES_K = (30.0, 100.0, 300.0, 1000.0, 2500.0, 3000.0, 4000.0, 6000.0)
 FEW_TEMPERATURES_K = (30.0, 2500.0, 6000.0)  # above n_max = 500, where each takes half a minute
+_REPEATS = ((30, 20), (100, 15), (200, 7), (300, 5), (1000, 3))  # up to n_max, times
 # Warms up the child's compile cache, whose compiler would count as memory: library calls and
 # small blocks.
 WARM_UP = 60
@@ -96,15 +97,5 @@ def imbalance_of_chances(factored: FactoredInterior) -> float:
 
 
 def repeats(n_max: int) -> int:
-    """How often all are timed."""
-    return (
-        20
-        if n_max <= 30
-        else 15
-        if n_max <= 100
-        else 7
-        if n_max <= 200
-        else 5
-        if n_max <= 300
-        else 3
-    )
+    """How often all take their turn."""
+    return next(count for size, count in _REPEATS if n_max <= size)

@@ -15,7 +15,8 @@ from benchmarks.promises.elimination import rows_of
 from benchmarks.promises.memory import in_child
 from benchmarks.promises.table import Row, lay_out, row, summary, without_figure
 from benchmarks.promises.targets import TARGETS
-from benchmarks.timing import matrix_product
+from benchmarks.timing import clocked, matrix_product
+from levelnet.network import assembly
 
 TINY = 12
 ON_ONE_ATOM = {"P1", "P2", "P3", "P4", "P5", "P7", "P8", "P11"}
@@ -40,6 +41,28 @@ def test_every_figure_of_an_atom(monkeypatch: pytest.MonkeyPatch) -> None:
         # Errors against splu, populations and sums are real ones, with the bounds of any size.
         assert one.is_met, one
         assert 0.0 < one.seen < math.inf, one
+
+
+def test_a_spoiled_elimination_is_missed(monkeypatch: pytest.MonkeyPatch) -> None:
+    """One coupling off by 1e-9: sums, sources and splu all see it, whatever the ratio."""
+    plain = assembly.factor_symmetric
+
+    def spoiled(*arguments):  # type: ignore[no-untyped-def]
+        factored = plain(*arguments)
+        factored.coupling[0] *= 1.0 + 1e-9
+        return factored
+
+    monkeypatch.setattr(assembly, "factor_symmetric", spoiled)
+    for name, promise in (("P1", 0.0), ("P2", 0.0), ("P7", 1e-13)):
+        monkeypatch.setitem(TARGETS[name].promise, TINY, promise)
+    rows = rows_of(TINY, {"P1", "P2", "P7"})
+    assert [one.is_met for one in rows] == [False] * 3, rows
+
+
+def test_a_clock_that_is_never_called_says_so() -> None:
+    with pytest.raises(RuntimeError, match="factor_symmetric was never called"):
+        with clocked(assembly, "factor_symmetric"):
+            pass
 
 
 def test_a_missed_promise_ends_with_one(
