@@ -5,7 +5,7 @@
 P1 to P11 in words and numbers stand in `targets.py`. Everything is timed in this process, on one
 BLAS thread, in process time, best of several turns of ours, the rivals and a 1536^3 dgemm; but
 memory (P6), which is that of fresh processes. The exit code is 1 where a promise is missed. With
---largest 1000 all of it runs: some 8 GB and some ten minutes.
+--largest 1000 all of it runs: some 9 GB and ten minutes, both estimated from 500.
 """
 
 from __future__ import annotations

@@ -124,6 +124,12 @@ def test_rows_stand_in_order_and_in_columns() -> None:
     )
 
 
+def test_a_process_that_dies_has_missed(capsys: pytest.CaptureFixture[str]) -> None:
+    peak, error = in_child(1)  # no atom of this size
+    assert not row("P6", 500, error, "populations", 1e-12, peak).is_met
+    assert "n_max = 1: the process ended with" in capsys.readouterr().err
+
+
 def test_memory_of_a_process_of_its_own() -> None:
     peak, error = in_child(TINY)
     assert error < 1e-12
