@@ -23,6 +23,7 @@ from benchmarks.timing import best_of, cpu_seconds, machine, matrix_product  # f
 
 # isort: split
 import numpy as np
+from scipy.sparse import csc_array
 from scipy.sparse.linalg import splu
 
 from levelnet.network import assembly
@@ -54,6 +55,12 @@ def factor_inputs(ladder: Ladder, temperature_k: float) -> tuple[tuple, np.ndarr
     return seen["arguments"], seen["coupling"]
 
 
+def general_matrix(ladder: Ladder, temperature_k: float) -> csc_array:
+    """The physical matrix of the interior, as splu wants it."""
+    inside = ladder.interior.position - 1
+    return csc_array(assembly.rate_matrix(ladder, temperature_k)[inside][:, inside])
+
+
 def report(n_max: int) -> None:
     """Print one size."""
     ladder = hydrogen_ladder(n_max, "nonrelativistic", ((2, 0), (2, 1)))
@@ -70,8 +77,7 @@ def report(n_max: int) -> None:
     repeats = 20 if n_max <= 100 else 5 if n_max <= 300 else 2
     error, ratios = float("nan"), ""
     if n_max <= LARGEST_FOR_RIVAL:
-        inside = ladder.interior.position - 1
-        matrix = assembly.rate_matrix(ladder, TEMPERATURE_K)[inside][:, inside].tocsc()
+        matrix = general_matrix(ladder, TEMPERATURE_K)
         rival_fates = splu(matrix).solve(factored.to_kept.T, trans="T").T
         error = np.abs(rival_fates / fates[: len(rival_fates)] - 1.0).max()
         blocks = assembly.rate_blocks(ladder, TEMPERATURE_K)

@@ -55,17 +55,22 @@ def worst_error() -> float:
     return worst
 
 
+def per_coefficient(n_max: int) -> tuple[float, float]:
+    """Seconds per coefficient into a reused buffer, and how many operations dgemm does in it."""
+    count = sum((n_max - l) * (n_max - l - 1) - (n_max - l - 1) for l in range(n_max - 1))
+    buffer = np.empty(sum((n_max - l) * (n_max - l - 1) for l in range(n_max - 1)))
+    product, operations = matrix_product()
+    dipole_blocks(n_max, out=buffer)
+    own, dgemm = best_of([lambda: dipole_blocks(n_max, out=buffer), product], 5)
+    return own / count, own / count * operations / dgemm
+
+
 if __name__ == "__main__":
     print(machine())
     print(f"largest relative error at n <= 120: {worst_error():.1e}")
     for size in [int(argument) for argument in sys.argv[1:]] or [100, 300]:
-        count = sum((size - l) * (size - l - 1) - (size - l - 1) for l in range(size - 1))
-        buffer = np.empty(sum((size - l) * (size - l - 1) for l in range(size - 1)))
-        product, operations = matrix_product()
-        dipole_blocks(size, out=buffer)
-        own, dgemm = best_of([lambda n=size, b=buffer: dipole_blocks(n, out=b), product], 5)
-        flops = own / count * operations / dgemm
+        seconds, flops = per_coefficient(size)
         print(
-            f"n_max {size:4d}: {1e9 * own / count:.1f} ns per coefficient, as long as {flops:.0f} "
+            f"n_max {size:4d}: {1e9 * seconds:.1f} ns per coefficient, as long as {flops:.0f} "
             "operations of dgemm"
         )
