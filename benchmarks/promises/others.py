@@ -6,6 +6,7 @@ from benchmarks.timing import best_of, clocked, matrix_product  # first: pins th
 
 # isort: split
 import numpy as np
+from scipy.interpolate import CubicSpline
 
 from benchmarks.distilled import COSMOLOGY, REDSHIFTS, General, at_equal_error, small_table
 from benchmarks.lines import per_coefficient, worst_error
@@ -27,11 +28,24 @@ def line_rows(sizes: list[int]) -> list[Row]:
     ]
 
 
-def history_rows() -> list[Row]:
-    """P10 with as many steps as it says, and with as many as the default accuracy needs.
+def euler(general: General) -> FloatArray:
+    """x_e by backward Euler in 2000 equal steps of ln(1 + z): what P10 is to beat."""
+    places = np.linspace(general.start, float(general.outputs[-1]), _STEPS + 1)
+    step, y, found = places[1] - places[0], general.state.copy(), [general.state[0]]
+    for s in places[1:].tolist():
+        before, y = y, y.copy()
+        for _ in range(4):
+            away = y - before - step * np.array(general.rate(s, y))
+            y -= np.linalg.solve(np.eye(2) - step * general.jacobian(s, y), away)
+        found.append(y[0])
+    return np.asarray(1.0 / (1.0 + np.exp(-CubicSpline(places, found)(general.outputs))))
 
-    Each history gives 2000 redshifts. The last row has no promise: scipy's LSODA on the same
-    compiled equations at equal error, over ours, the whole call on both sides.
+
+def history_rows() -> list[Row]:
+    """P10, and what 2000 of our steps cost.
+
+    The last row has no promise: scipy's LSODA on the same compiled equations at equal error, over
+    ours, the whole call on both sides.
     """
     table = small_table()
 
@@ -43,10 +57,6 @@ def history_rows() -> list[Row]:
     def error(x: FloatArray) -> float:
         return float(np.max(np.abs(x / exact - 1.0)))
 
-    def history_row(run: FastHistory, what: str, seen: float, promise: float | None) -> Row:
-        off, against = error(run.free_electron_fraction), "run to 1e-11"
-        return Row("P10", run.n_steps, off, against, AGAINST_TIGHT_HISTORY, seen, what, promise)
-
     plain, product = ours(), matrix_product()[0]
     general = General(table, plain.start_redshift)
     own = error(plain.free_electron_fraction)
@@ -57,12 +67,16 @@ def history_rows() -> list[Row]:
         best_of([lambda: ours(many), product], 10)
     with clocked(history, "effective_history") as short:
         whole, lsoda, _ = best_of([ours, lambda: general.solve("LSODA", tolerance), product], 20)
-    words, promise = TARGETS["P10"].what, TARGETS["P10"].promise[_STEPS]
+
+    def history_row(run: FastHistory, what: str, seen: float, promise: float | None) -> Row:
+        off = error(run.free_electron_fraction)
+        allowed = min(AGAINST_TIGHT_HISTORY, error(euler(general)))
+        return Row("P10", len(REDSHIFTS), off, "run to 1e-11", allowed, seen, what, promise)
+
+    words, promise = TARGETS["P10"].what, TARGETS["P10"].promise[len(REDSHIFTS)]
     rival = "scipy LSODA, same equations and error, over this"
     return [
-        history_row(ours(many), words, 1e3 * long.best, promise),
-        history_row(
-            plain, "the same, in the steps that 1e-6 of x_e needs", 1e3 * short.best, promise
-        ),
+        history_row(plain, words, 1e3 * short.best, promise),
         history_row(plain, rival, lsoda / whole, None),
+        history_row(ours(many), f"the same in {_STEPS} steps of ours, ms", 1e3 * long.best, None),
     ]

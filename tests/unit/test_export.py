@@ -450,14 +450,15 @@ def test_grid_names_the_factors_kept_out() -> None:
     table = small_table(lyman=2, two_photon="stimulated")
     names, data = read_grid(exported_texts(table, "csv", "lantern")["lantern.csv"])
     kelvin = np.exp(data[:, 0])
-    rates = table.effective_rates(kelvin * (1 - 1e-13), kelvin * (1 - 1e-13))
+    # Where a row stands on the border of two patches, either may have made it.
+    sides = [table.effective_rates(kelvin * (1 + d), kelvin * (1 + d)) for d in (-1e-13, 1e-13)]
     depth = table.saha.ionization_k
     for k, level in enumerate(("2s", "2p", "3p")):
-        column = data[:, names.index(f"ln_photoionization_{level}")]
-        assert column - depth[k] / kelvin == pytest.approx(
-            rates.log_photoionization[:, k], abs=1e-9
-        )
+        column = data[:, names.index(f"ln_photoionization_{level}")] - depth[k] / kelvin
+        away = [np.abs(column - one.log_photoionization[:, k]) for one in sides]
+        assert np.minimum(*away).max() < 1e-9
     column = data[:, names.index("ln_exchange_3p_to_2p")]
     pair = [(i, j) for i, j in zip(table.lower, table.upper, strict=True)].index((1, 2))
-    truth = rates.log_exchange[:, 2, 1] + table.barrier_k[pair] / kelvin
-    assert column == pytest.approx(truth, abs=1e-9)
+    kept_out = table.barrier_k[pair] / kelvin
+    away = [np.abs(column - one.log_exchange[:, 2, 1] - kept_out) for one in sides]
+    assert np.minimum(*away).max() < 1e-9
