@@ -240,7 +240,7 @@ def test_changed_constants_further_lines_and_names_of_helium() -> None:
         hydrogen={"n_max": 5},
         lines={"lyman_lines": 2},
         physics={"fine_structure_change": 0.05, "electron_mass_change": -0.03},
-        accuracy={"relative": 1e-9},
+        accuracy={"relative": 1e-8},
         grid={"redshift_start": 1800.0, "redshift_end": 850.0, "redshifts": (1800.0, 900.0, 850.0)},
     )
     ours = weigh(setup, ["x_e(900)"])
