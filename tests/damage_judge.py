@@ -147,6 +147,16 @@ class Judge:
     """The process, as the tests see it."""
 
     def __init__(self) -> None:
+        self._start()
+
+    def renew(self) -> None:
+        """Start anew if it has died, hung or passed its memory: one test's fault stays its own."""
+        if not self._sound or self.peak >= MOST_BYTES:
+            self.close()
+            self._start()
+        self._first = True
+
+    def _start(self) -> None:
         paths = [str(ROOT), *os.environ.get("PYTHONPATH", "").split(os.pathsep)]
         self._process = subprocess.Popen(
             [sys.executable, "-c", "from tests.damage_judge import serve; serve()"],
@@ -156,15 +166,16 @@ class Judge:
             text=True,
         )
         self.peak = 0
-        self._first = True
+        self._first, self._sound = True, True
 
     def ask(self, **asked: Any) -> str:
         """Return the verdict on a file; words of its own where the process hangs or dies."""
         assert self._process.stdin is not None
         assert self._process.stdout is not None
+        self._sound = False  # until it has answered
         self._process.stdin.write(json.dumps(asked) + "\n")
         self._process.stdin.flush()
-        # The first answer waits for Python and its libraries.
+        # The first answer of a test waits for Python, or for the libraries of another kind of file.
         patience = PATIENCE_S + 50.0 * self._first
         if not select.select([self._process.stdout], [], [], patience)[0]:
             return f"HANG over {patience:g} s"
@@ -173,6 +184,7 @@ class Judge:
         if not line:
             return f"DEATH {self._process.wait()}"
         answer = json.loads(line)
+        self._sound = True
         self.peak = max(self.peak, answer["peak"])
         return str(answer["verdict"])
 
@@ -180,7 +192,8 @@ class Judge:
         """End the process."""
         assert self._process.stdin is not None
         assert self._process.stdout is not None
-        self._process.stdin.close()
+        with contextlib.suppress(BrokenPipeError):  # it died with a question unread
+            self._process.stdin.close()
         self._process.stdout.close()
         try:
             self._process.wait(10.0)

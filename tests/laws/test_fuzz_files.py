@@ -42,11 +42,19 @@ def folder(tmp_path_factory: pytest.TempPathFactory) -> Path:
     return tmp_path_factory.mktemp("fuzz")
 
 
-@pytest.fixture
-def judge() -> Iterator[Judge]:
+@pytest.fixture(scope="module")
+def lasting() -> Iterator[Judge]:
+    """One process for all files: a start of Python and its libraries costs as much as 500 files."""
     one = Judge()
     yield one
     one.close()
+
+
+@pytest.fixture
+def judge(lasting: Judge) -> Judge:
+    """The process, a new one where an earlier test has killed, hung or filled it."""
+    lasting.renew()
+    return lasting
 
 
 def sample(kind: str, folder: Path) -> Path:

@@ -135,6 +135,7 @@ def test_time_and_memory_of_the_process_are_limited(stored: Path, kept: Any) -> 
     assert found["Max core file size"] == "0"
 
 
+@pytest.mark.filterwarnings("ignore:.*fork.*:DeprecationWarning")
 def test_alarm_kills_what_does_not_come_to_an_end() -> None:
     child = os.fork()
     if child == 0:

@@ -270,7 +270,10 @@ def test_rates_of_helium_are_ranked() -> None:
     assert render(figure, "svg") == render(helium_figure(weighing, TARGET, "J"), "svg")
 
 
-def test_figures_of_helium_are_among_the_files(tmp_path: Path) -> None:
+def test_figures_of_helium_are_among_the_files(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    monkeypatch.setattr("levelnet.report.style.render", lambda figure, kind: b"drawn")
     weighing = with_helium(invented_weighing((TARGET,)))
     written = save_weighing_figures(weighing, tmp_path)
     assert set(written) == set(figure_paths((TARGET,), False, tmp_path, helium=True))

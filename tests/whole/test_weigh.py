@@ -160,10 +160,12 @@ def test_forty_rates_and_groups_of_the_rest(end: float, count: int) -> None:
 def test_whole_shells_weigh_what_their_levels_weigh_together() -> None:
     # With populations statistical by a network of whole shells, the sum over all rates is the same
     # kind of number: here it is held by a common factor on every line, in whole runs.
-    setup = small_setup(hydrogen={"n_max": 12, "resolve_l_to": 6}, accuracy={"relative": 1e-9})
     name = "x_e(900)"
-    grid = dataclasses.replace(setup.grid, redshifts=(1800.0, 900.0, 20.0))
-    setup = dataclasses.replace(setup, grid=grid)
+    # It ends soon after: what comes later cannot weigh.
+    grid = {"redshift_start": 1800.0, "redshift_end": 850.0, "redshifts": (1800.0, 900.0, 850.0)}
+    setup = small_setup(
+        hydrogen={"n_max": 12, "resolve_l_to": 6}, accuracy={"relative": 1e-9}, grid=grid
+    )
     ours = weigh(setup, [name])
 
     def log_x(row: str) -> float:
@@ -238,8 +240,8 @@ def test_changed_constants_further_lines_and_names_of_helium() -> None:
         hydrogen={"n_max": 5},
         lines={"lyman_lines": 2},
         physics={"fine_structure_change": 0.05, "electron_mass_change": -0.03},
-        accuracy={"relative": 1e-9},
-        grid={"redshift_start": 1800.0, "redshift_end": 100.0, "redshifts": (1800.0, 900.0, 100.0)},
+        accuracy={"relative": 1e-8},
+        grid={"redshift_start": 1800.0, "redshift_end": 850.0, "redshifts": (1800.0, 900.0, 850.0)},
     )
     ours = weigh(setup, ["x_e(900)"])
 
