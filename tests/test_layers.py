@@ -110,5 +110,15 @@ def test_kernels_take_no_options(path: Path) -> None:
             ), node.name
 
 
+def test_the_caller_of_blas_imports_the_compiler_and_nothing_of_ours() -> None:
+    found = imported_names(PACKAGE / "kernels" / "blas.py")
+    modules = {one.split(":")[0].split(".")[0] for one in found}
+    assert modules == {"__future__", "functools", "importlib", "re", "typing"} | {
+        "llvmlite",
+        "numba",
+        "numpy",
+    }
+
+
 def test_kernel_files_are_found() -> None:
     assert KERNEL_FILES

@@ -14,7 +14,7 @@ from benchmarks.promises import targets
 from benchmarks.promises.node import TEMPERATURE_K, NodeMaker, largest
 from benchmarks.promises.table import Row, without_figure
 from levelnet.network.assembly import FactoredInterior, rate_blocks
-from levelnet.numerics.block_lu import factor_general
+from levelnet.numerics.block_lu import BlockLU, factor_general
 
 
 class Rival(Protocol):
@@ -99,13 +99,15 @@ class WithoutSymmetry:
     def __init__(self, maker: NodeMaker, factored: FactoredInterior) -> None:
         blocks = rate_blocks(maker.ladder, TEMPERATURE_K)
         sink = factored.photoionization + factored.to_kept.sum(axis=0)
-        self.arguments = (maker.ladder.interior.shape, *blocks, sink)
+        self.shape, self.blocks, self.sink = maker.ladder.interior.shape, blocks, sink
 
-    def factor(self) -> None:
-        factor_general(*self.arguments)
+    def factor(self) -> BlockLU:
+        # It overwrites the rates that it is given.
+        rates = ([one.copy() for one in side] for side in self.blocks)
+        return factor_general(self.shape, *rates, self.sink)
 
     def error(self, factored: FactoredInterior) -> float:
-        fates = factor_general(*self.arguments).solve(factored.to_kept)
+        fates = self.factor().solve(factored.to_kept)
         return largest(factored.fates(factored.to_kept), fates)
 
 

@@ -17,7 +17,7 @@ class Row:
     target : str
         "P1" to "P11".
     size : int
-        n_max; of P10 the number of steps.
+        n_max; of P10 the number of redshifts.
     error : float
         Largest relative error of what was measured.
     against : str

@@ -39,9 +39,11 @@ from .table import EffectiveTable
 Progress = Callable[[str, float], None]
 
 TIGHTEST, LOOSEST = 1e-10, 1e-2
-# The coldest of all, and by default: there the symmetric form still serves, which takes half the
-# time and memory, to the end of the reference's range too.
-_COLDEST_K, _COLD_K, _HOT_K = 5.0, 27.4, 9000.0
+# Lowest T_r allowed, and the default range. The reference of the certificate, a little wider, still
+# has the symmetric form, with half the time and memory of the other.
+_COLDEST_K, _COLD_K, _HOT_K = 5.0, 27.5, 9000.0
+# Of the range in ln T_r: so much wider is the reference, to have no node in common with the table.
+_WIDER = 0.003
 _LEAST_RATIO, _LARGEST_RATIO = 0.004, 10.0
 # Shares of the tolerance: what the series through the exact nodes may err, and the patches.
 _SERIES, _PATCHES = 0.1, 0.5
@@ -76,7 +78,7 @@ def distill(  # noqa: PLR0913  choices by name, each with a default
         Largest error in the ln of each rate, measured off the nodes; of exchange rates with the
         Boltzmann factor of their barrier kept out.
     radiation_range_k : tuple of float, K, within 5 to 27500
-        Range of T_r, for the measured constants. None: 27.4 to 9000 K, z = 9.1 to 3300 at 2.7255 K;
+        Range of T_r, for the measured constants. None: 27.5 to 9000 K, z = 9.1 to 3300 at 2.7255 K;
         with levels of helium up to 27500 K, where it is doubly ionized.
     ratio_range : tuple of float, within 0.004 to 10
         Range of T_m/T_r, 1 inside. Matter above 8000 K and above T_r is refused all the same.
@@ -113,7 +115,8 @@ def distill(  # noqa: PLR0913  choices by name, each with a default
     if radiation_range_k is None:
         radiation_range_k = default_range_k(setup)
     ranges = _ranges(radiation_range_k, ratio_range)
-    check_memory(setup, workers, populations=0, coldest_k=radiation_range_k[0])
+    coldest_k = coldest_node_k(radiation_range_k, certify)
+    check_memory(setup, workers, populations=0, coldest_k=coldest_k)
     tell = progress or (lambda stage, fraction: None)
     atom = Atom.of(setup.hydrogen, choice, setup.rates.network)
     tell("atomic data", 0.0)
@@ -158,6 +161,12 @@ def check_distillable(
 def default_range_k(setup: Setup) -> tuple[float, float]:
     """Range of T_r that a table has where none is asked for, in K."""
     return _COLD_K, HOTTEST_K if setup.helium_recombines else _HOT_K
+
+
+def coldest_node_k(radiation_range_k: tuple[float, float], certify: bool = True) -> float:
+    """Lowest T_r at which :func:`distill` may reduce hydrogen for a table of this range, in K."""
+    low, high = radiation_range_k
+    return low * (low / high) ** _WIDER if certify else low
 
 
 def expected_reductions(setup: Setup, tolerance: float, certify: bool = True) -> int:
@@ -219,8 +228,7 @@ def _series_error(
 def _reference(source: NodeSource, ranges: Ranges, tolerance: float) -> TabulatedReduction:
     """The full network over all T_r of the table, on nodes of its own."""
     ladder, _, constants = outline(source.atom)
-    # A range a little different has no node in common with the table's.
-    shift = 0.003 * (ranges.log_high - ranges.log_low)
+    shift = _WIDER * (ranges.log_high - ranges.log_low)
     own = ranges._replace(log_low=ranges.log_low - shift, log_high=ranges.log_high + shift)
     error = max(_SERIES * tolerance, 1e-11)
     series = _series(source, constants, own, error)

@@ -18,7 +18,7 @@ from ..network.rates import RateConstants
 from ..network.reduced import KeptLevels
 from ..network.scaled import scaled_levels
 from .kept import choose_kept
-from .nodes import Atom, compute_node, prepared
+from .nodes import Atom, compute_node, drop_buffers, prepared
 
 NEVER = -700.0
 """Stands for the logarithm of an exchange rate that is exactly zero, in nodes and tables."""
@@ -124,6 +124,7 @@ def effective_rates(
         capture[here] = log_capture(constants, node, matter[here])
         photo[here] = log_photo(constants, node, temperature_k)
         exchange[here] = log_exchange(constants, node[: len(constants.lower)], temperature_k)
+    drop_buffers()
     return _scaled(ladder.kept, capture, photo, exchange, factor)
 
 

@@ -29,7 +29,7 @@ from ..arrays import FloatArray
 from ..atomic.overrides import Override
 from ..atomic.species import Hydrogen
 from ..errors import SolveError
-from ..network.assembly import COLD_K, Workspace
+from ..network.assembly import Workspace
 from ..network.ladder import Ladder, hydrogen_ladder
 from ..network.rates import RateConstants, rate_constants, stack
 from ..network.reduction import Pairs, exchange_pairs, reduce_at
@@ -99,9 +99,9 @@ class _Buffers(threading.local):
     atom: Atom | None = None
     workspace: Workspace | None = None
 
-    def of(self, atom: Atom) -> Workspace:
+    def of(self, atom: Atom, ladder: Ladder) -> Workspace:
         if self.workspace is None or self.atom != atom:
-            self.atom, self.workspace = atom, Workspace.of(prepared(atom)[0])
+            self.atom, self.workspace = atom, Workspace.of(ladder)
         return self.workspace
 
     def drop(self) -> None:
@@ -135,10 +135,12 @@ def compute_node(atom: Atom, temperature_k: float) -> dict[str, FloatArray]:
     """
     with threadpool_limits(limits=1, user_api="blas"):
         ladder, pairs, _ = prepared(atom)
-        if temperature_k < COLD_K:  # without symmetry they are of no use, and stand in the way
-            _buffers.drop()
-            return {"node": stack(reduce_at(ladder, pairs, temperature_k))}
-        return {"node": stack(reduce_at(ladder, pairs, temperature_k, _buffers.of(atom)))}
+        return {"node": stack(reduce_at(ladder, pairs, temperature_k, _buffers.of(atom, ladder)))}
+
+
+def drop_buffers() -> None:
+    """Give back what reductions in this thread left for the next one."""
+    _buffers.drop()
 
 
 def process_pool(workers: int) -> ProcessPoolExecutor:
@@ -222,8 +224,11 @@ class NodeSource:
 
     def _compute(self, missing: list[float]) -> Iterator[tuple[float, dict[str, FloatArray]]]:
         if self.executor is None:
-            for temperature_k in missing:
-                yield temperature_k, compute_node(self.atom, temperature_k)
+            try:
+                for temperature_k in missing:
+                    yield temperature_k, compute_node(self.atom, temperature_k)
+            finally:
+                drop_buffers()
             return
         left = dict.fromkeys(missing)
         yield from _through(self.executor, self.atom, left)

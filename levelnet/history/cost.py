@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 from dataclasses import dataclass
 
+from ..atomic.physics import scales
 from ..errors import InputError
 from ..network.assembly import COLD_K
 from ..network.tabulation import node_count
@@ -76,7 +77,8 @@ def estimate(
     border = (n - top) * top**2 / 2.0
     copies = 2.0 if setup.rates.network else 1.0
     low = setup.cosmology.cmb_temperature_k * (1.0 + setup.grid.redshift_end)
-    factored = 3.5 if (coldest_k or low) < COLD_K else 1.5
+    coldest_k = coldest_reduction_k(setup) if coldest_k is None else coldest_k
+    factored = 3.5 if coldest_k < COLD_K else 1.5
     cubes = 8.0 * (copies * n**3 + (factored + (top < n)) * top**3) / 3.0
     cubes += _BORDERS * 8.0 * border
     # Of He I and He II: both spins, and half as many.
@@ -91,6 +93,17 @@ def estimate(
     evaluation = _SECONDS_PER_EVALUATION if setup.accuracy.interpolate else 5.0 * node
     seconds = (nodes + solved) * node + _EVALUATIONS * evaluation + 1e-8 * n**3
     return Cost(memory, seconds + more_s + _field_seconds(setup))
+
+
+def coldest_reduction_k(setup: Setup) -> float:
+    """Lowest T_r at which a history reduces its network, for the measured constants, in K."""
+    last = float(setup.cosmology.radiation_temperature_k(setup.grid.redshift_end))
+    return lattice_below_k(last / scales(setup.physics).energy)
+
+
+def lattice_below_k(temperature_k: float) -> float:
+    """Round down to the lattice that runs of one atom share, whatever their universe, in K."""
+    return float(2.0 ** (math.floor(4.0 * math.log2(temperature_k)) / 4.0))
 
 
 def _of_helium(setup: Setup, solved: int, reduced: bool) -> tuple[float, float]:

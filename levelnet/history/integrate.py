@@ -22,7 +22,7 @@ from ..network.tabulation import TabulatedReduction, live_reduction, node_count,
 from ..numerics.stepping import Trajectory, integrate
 from ..pieces import Pieces, code_digest
 from .atom import build_ladder, open_lyman_lines, resonance_lines
-from .cost import table_tolerance
+from .cost import lattice_below_k, table_tolerance
 from .course import Course
 from .equations import SlowEquations
 from .field import FieldRun, resolve_field
@@ -283,7 +283,7 @@ def _table(
     unit = scales(setup.physics).energy
     low, high = (setup.cosmology.radiation_temperature_k(float(z)) / unit for z in span)
     # Outwards to a lattice, so that runs of one atom share their nodes whatever the universe.
-    low_k = 2.0 ** (math.floor(4.0 * math.log2(float(low))) / 4.0)
+    low_k = lattice_below_k(float(low))
     high_k = 2.0 ** (math.ceil(4.0 * math.log2(float(high))) / 4.0)
     tolerance = table_tolerance(setup)
     expected = node_count(low_k, high_k, tolerance) + 7

@@ -1,4 +1,4 @@
-"""From line strengths and occupation numbers to the scaled symmetric blocks of one network."""
+"""From line strengths and occupation numbers to couplings, outflows and scales of one network."""
 
 import math
 

@@ -15,13 +15,12 @@ from typing import Any, cast
 import numpy as np
 from llvmlite import ir
 from numba import types
-from numba.core.cgutils import alloca_once_value as _alloca
+from numba.core import cgutils
 from numba.extending import get_cython_function_address, intrinsic
 from numpy.typing import NDArray
 
 # numba states no types.
-_in_memory: Any = _alloca
-
+_alloca_once_value: Any = cgutils.alloca_once_value
 
 _ROUTINES = ("dgemm", "dgemv", "dsymv", "dsyrk", "dtpsv", "dtrmm", "dtrsm", "dtrsv")
 DGEMM, DGEMV, DSYMV, DSYRK, DTPSV, DTRMM, DTRSM, DTRSV = range(len(_ROUTINES))
@@ -47,8 +46,9 @@ def _call(typing_context: Any, address: Any, arguments: Any) -> Any:
     """Call a BLAS routine with a tuple of its arguments.
 
     Addresses of arrays (uint64, as ``array.ctypes.data`` is) go as they are; everything else by
-    reference, as Fortran wants it: letters (uint8), numbers (float64), and sizes, which become the
-    32-bit integers of BLAS.
+    reference, as Fortran wants it: letters (uint8), numbers (float64), and sizes (int64, below
+    2^31; never uint64, which would be taken for an address), which become the 32-bit integers of
+    BLAS. Arrays must be contiguous and of float64; nothing checks it.
     """
 
     def code(context: Any, builder: Any, signature: Any, values: Any) -> Any:
@@ -62,7 +62,7 @@ def _call(typing_context: Any, address: Any, arguments: Any) -> Any:
                 continue
             if isinstance(kind, whole) and kind.bitwidth > 32:
                 value = builder.trunc(value, ir.IntType(32))
-            handed.append(builder.bitcast(_in_memory(builder, value), place))
+            handed.append(builder.bitcast(_alloca_once_value(builder, value), place))
         routine = ir.FunctionType(ir.VoidType(), [place] * len(handed))
         builder.call(builder.inttoptr(values[0], routine.as_pointer()), handed)
         return context.get_dummy_value()

@@ -24,6 +24,7 @@ from ..errors import Outcome, SolveError
 from ..kernels.assembly import symmetric_blocks
 from ..numerics.block_cholesky import BlockCholesky, factor_symmetric
 from ..numerics.block_lu import BlockLU, factor_general
+from ..numerics.block_system import BlockShape
 from ..numerics.bordered import BorderedCholesky, BorderedLU, border_general, border_symmetric
 from .ladder import Ladder, line_groups
 from .line_rates import (
@@ -40,7 +41,7 @@ SymmetricSolver = BlockCholesky | BorderedCholesky
 GeneralSolver = BlockLU | BorderedLU
 
 # sqrt(w) spans e^(1.51 eV / 2kT), which reaches e^326 here; doubles end at e^709 and products of
-# two such factors occur.
+# two such factors occur. Just below a point of the lattice to which histories reduce, 2^4.75 K.
 COLD_K = 26.9
 
 
@@ -148,14 +149,23 @@ class FactoredInterior:
 class Workspace:
     """Buffers reused from one temperature to the next; contents mean nothing in between."""
 
-    coupling: FloatArray
-    factor: FloatArray
+    shape: BlockShape
+    _buffers: tuple[FloatArray, FloatArray] | None = None
 
     @staticmethod
     def of(ladder: Ladder) -> Workspace:
-        """Buffers for one ladder."""
-        shape = ladder.interior.shape
-        return Workspace(np.empty(shape.n_couplings), np.empty(shape.n_factors))
+        """Buffers for one ladder, made when they are first used."""
+        return Workspace(ladder.interior.shape)
+
+    def buffers(self) -> tuple[FloatArray, FloatArray]:
+        """For the couplings and for the factors."""
+        if self._buffers is None:
+            self._buffers = np.empty(self.shape.n_couplings), np.empty(self.shape.n_factors)
+        return self._buffers
+
+    def release(self) -> None:
+        """Give the memory back."""
+        self._buffers = None
 
 
 def interior_photoionization(ladder: Ladder, temperature_k: float) -> FloatArray:
@@ -224,6 +234,8 @@ def factor_interior(
     log_root = 0.5 * (np.log(weight) - (energy - energy.min(initial=np.inf)) / kt)
     solver: SymmetricSolver | GeneralSolver
     if radiation_temperature_k < COLD_K:
+        if workspace is not None:  # of no use without symmetry, which itself takes more memory
+            workspace.release()
         cold = _factor_cold(ladder, radiation_temperature_k, sink)
         solver, diagonal = cold, cold.diagonal
     else:
@@ -268,11 +280,12 @@ def _factor_blocks(
     shape = ladder.interior.shape
     scale, downward, diagonal = np.empty((3, shape.n_unknowns))
     lines = block_lines(ladder, tables, root, kt_ev)
-    symmetric_blocks(*lines, sink, scale, downward, diagonal, work.coupling)
+    coupling, factor = work.buffers()
+    symmetric_blocks(*lines, sink, scale, downward, diagonal, coupling)
     if np.any(diagonal <= 0.0):
         raise SolveError(Outcome.SINGULAR.value)
     weight, excess = root * np.sqrt(diagonal), sink * root * scale
-    solver = factor_symmetric(shape, work.coupling, weight, downward, excess, work.factor, scale)
+    solver = factor_symmetric(shape, coupling, weight, downward, excess, factor, scale)
     return solver, diagonal
 
 

@@ -14,6 +14,7 @@ the block form of the idea of Grassmann, Taksar & Heyman 1985, Oper. Res. 33, 11
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from dataclasses import dataclass
 
 import numpy as np
@@ -21,8 +22,11 @@ import numpy as np
 from ..arrays import FloatArray, IntArray
 from ..errors import Outcome, SolveError
 from ..kernels.blas import blas_addresses
-from ..kernels.blocks import factor_blocks, solve_blocks
+from ..kernels.blocks import PANEL, factor_blocks, solve_blocks
 from .block_system import BlockShape
+
+# Sum of cubes of sizes that one call of the kernel eliminates: some 7/3 as many operations.
+_PART = 4_000_000_000
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -57,6 +61,8 @@ class BlockCholesky:
             The solutions. H is symmetric, so they solve the transposed system too.
         """
         x = np.array(right, dtype=np.float64, order="C")
+        if x.ndim != 2 or x.shape[1] != self.shape.n_unknowns:
+            raise ValueError(f"right: shape (n_right, {self.shape.n_unknowns}), not {x.shape}")
         solve_blocks(blas_addresses(), *_layout(self.shape), self.coupling, self.factor, x)
         return x
 
@@ -99,18 +105,52 @@ def factor_symmetric(
     ------
     SolveError
         If a block is not positive definite (an unknown without exit).
+    ValueError
+        For an array of another length or layout: BLAS sees addresses alone.
     """
+    n = shape.n_unknowns
+    factor = np.empty(shape.n_factors) if factor is None else factor
+    weight, outflow, excess, scale = (
+        np.ascontiguousarray(one, dtype=np.float64)
+        for one in (weight, outflow, excess, np.ones(n) if scale is None else scale)
+    )
+    _check_buffers(shape, coupling, factor)
+    if any(one.shape != (n,) for one in (weight, outflow, excess, scale)):
+        raise ValueError(f"weight, outflow, excess and scale: shape ({n},) each")
     if len(excess) and not (np.isfinite(excess).all() and (excess > 0.0).any()):
         raise SolveError(f"{Outcome.SINGULAR.value} (block l = 0)")
-    factor = np.empty(shape.n_factors) if factor is None else factor
-    scale = np.ones(len(weight)) if scale is None else scale
     carried = excess.copy()
-    status = factor_blocks(
-        blas_addresses(), *_layout(shape), scale, weight, outflow, carried, coupling, factor
-    )
-    if status:
-        raise SolveError(f"{Outcome.SINGULAR.value} (block l = {status - 1})")
+    largest = int(shape.size.max(initial=0))
+    work = np.empty((2, largest**2)), np.empty(PANEL * (PANEL + largest))
+    vectors = scale, weight, outflow, carried
+    for first, last in _stretches(shape):
+        status = factor_blocks(
+            blas_addresses(), first, last, *_layout(shape), *vectors, coupling, factor, *work
+        )
+        if status:
+            raise SolveError(f"{Outcome.SINGULAR.value} (block l = {status - 1})")
     return BlockCholesky(shape, coupling, factor)
+
+
+def _stretches(shape: BlockShape) -> Iterator[tuple[int, int]]:
+    """Blocks from high to low, in parts of a fraction of a second: one may interrupt in between."""
+    first, done = len(shape.size) - 1, 0
+    for block in range(first, -1, -1):
+        done += int(shape.size[block]) ** 3
+        if done > _PART or block == 0:
+            yield first, block
+            first, done = block - 1, 0
+
+
+def _check_buffers(shape: BlockShape, coupling: FloatArray, factor: FloatArray) -> None:
+    """Raise ValueError for a buffer that the kernel would overrun or misread."""
+    for name, buffer, count in (
+        ("coupling", coupling, shape.n_couplings),
+        ("factor", factor, shape.n_factors),
+    ):
+        sound = buffer.dtype == np.float64 and buffer.flags.c_contiguous
+        if not sound or buffer.shape != (count,):
+            raise ValueError(f"{name}: a contiguous array of {count} float64 numbers is needed")
 
 
 def _layout(shape: BlockShape) -> tuple[IntArray, IntArray, IntArray, IntArray]:

@@ -10,7 +10,12 @@ import dataclasses
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
 
-from ..distilled.build import check_distillable, default_range_k, expected_reductions
+from ..distilled.build import (
+    check_distillable,
+    coldest_node_k,
+    default_range_k,
+    expected_reductions,
+)
 from ..history.cost import (
     Cost,
     available_memory_bytes,
@@ -137,7 +142,7 @@ def plan_distill(
     """A table of effective rates: reductions for its series, for the reference, and at points."""
     check_distillable(setup, kept, tolerance)
     count = expected_reductions(setup, tolerance, certify)
-    coldest_k = default_range_k(setup)[0]
+    coldest_k = coldest_node_k(default_range_k(setup), certify)
     atom = check_memory(setup, workers, populations=0, coldest_k=coldest_k)
     one = Cost(atom.memory_bytes, node_seconds(setup))
     certificate = Cost(one.memory_bytes, _once_s(setup, certify))

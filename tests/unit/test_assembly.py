@@ -202,11 +202,22 @@ def test_lines_of_kept_levels_are_those_of_the_matrix() -> None:
 def test_a_workspace_changes_nothing() -> None:
     ladder = hydrogen_ladder(12, "measured", TWO)
     work = Workspace.of(ladder)
-    work.coupling[:], work.factor[:] = np.nan, np.nan
-    for kelvin in (3000.0, 100.0, 3000.0):
+    for buffer in work.buffers():
+        buffer[:] = np.nan
+    for kelvin in (3000.0, 100.0, 20.0, 3000.0):
         fresh = factor_interior(ladder, kelvin)
         reused = factor_interior(ladder, kelvin, work)
         assert np.array_equal(fresh.fates(fresh.to_kept), reused.fates(reused.to_kept))
+
+
+def test_a_workspace_gives_way_to_what_is_cold() -> None:
+    ladder = hydrogen_ladder(6, "measured", TWO)
+    work = Workspace.of(ladder)
+    before = work.buffers()
+    factor_interior(ladder, COLD_K, work)
+    assert work.buffers() is before
+    factor_interior(ladder, COLD_K - 1e-6, work)
+    assert work.buffers() is not before
 
 
 def test_nothing_inside() -> None:

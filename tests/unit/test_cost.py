@@ -10,10 +10,18 @@ from typing import Any
 import pytest
 
 from levelnet.background.cosmology import Cosmology
+from levelnet.distilled.build import coldest_node_k, default_range_k
 from levelnet.errors import InputError
 from levelnet.history import cost
-from levelnet.history.cost import check_memory, estimate, table_tolerance
+from levelnet.history.cost import (
+    check_memory,
+    coldest_reduction_k,
+    estimate,
+    lattice_below_k,
+    table_tolerance,
+)
 from levelnet.history.setup import Setup
+from levelnet.network.assembly import COLD_K
 from tests.small_helium import helium_setup
 from tests.small_runs import small_setup
 
@@ -154,8 +162,25 @@ def test_sizes_in_words(size: float, text: str) -> None:
     assert cost._readable(size) == text
 
 
-def test_without_symmetry_an_atom_takes_more() -> None:
-    # Closed form: three and a half cubes of n^3/3 numbers instead of one and a half.
-    setup = small_setup(100)
-    warm, cold = (estimate(setup, 0, coldest_k=kelvin).memory_bytes for kelvin in (30.0, 20.0))
-    assert cold - warm == pytest.approx(2.0 * 8.0 * 100**3 / 3.0)
+@pytest.mark.parametrize(("coldest_k", "seen_bytes"), [(30.0, 7.51e9), (20.0, 12.71e9)])
+def test_memory_of_a_reduction_at_the_highest_n(coldest_k: float, seen_bytes: float) -> None:
+    # Frozen: peaks of one process each, n_max = 1000, read off when the estimate was made; the
+    # second without the symmetric form.
+    foreseen = estimate(small_setup(1000), 0, coldest_k=coldest_k).memory_bytes
+    assert foreseen == pytest.approx(seen_bytes, rel=0.1)
+
+
+def test_a_history_knows_its_coldest_reduction() -> None:
+    # T_0 = 2.7255 K; down to 2^4.75 = 26.909 K, a point of the lattice, the symmetric form serves.
+    ends = {9.0: False, 8.87: True}
+    for redshift, is_cold in ends.items():
+        setup = small_setup(100, redshift)
+        assert (coldest_reduction_k(setup) < COLD_K) is is_cold
+    assert lattice_below_k(26.91) == pytest.approx(2.0**4.75, rel=1e-15)
+
+
+@pytest.mark.parametrize("setup", [small_setup(), helium_setup()], ids=["hydrogen", "helium"])
+def test_no_default_table_is_without_symmetry(setup: Setup) -> None:
+    whole = default_range_k(setup)
+    assert COLD_K <= coldest_node_k(whole) < whole[0]
+    assert coldest_node_k(whole, certify=False) == whole[0]

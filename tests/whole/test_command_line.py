@@ -609,7 +609,7 @@ def test_history_of_other_parameters(
 @pytest.mark.parametrize(
     ("words", "expected"),
     [
-        (["--redshifts", "9000", "100"], "outside the table; it holds 27.4 to 9000 K"),
+        (["--redshifts", "9000", "100"], "outside the table; it holds 27.5 to 9000 K"),
         (["--redshifts", "100", "1"], "outside the table"),
         (["--redshifts", "nan", "100"], "finite"),
         (["--baryon-density-h2", "0"], "baryon_density_h2 = 0.0"),
