@@ -27,7 +27,7 @@ IntArray = NDArray[np.int64]
 # Side of the triangles that are inverted, and of the panels over which their products are gathered:
 # measured at block sizes 50 to 1000.
 PANEL = 8
-WIDE = 128
+_MIDDLE, WIDE = 32, 128
 SMALL = 20  # up to here plain loops beat a call
 _NO, _TRANSPOSED = np.uint8(ord("N")), np.uint8(ord("T"))
 _LOWER, _LEFT, _RIGHT = np.uint8(ord("L")), np.uint8(ord("L")), np.uint8(ord("R"))
@@ -76,30 +76,39 @@ def _factor_triangle(
 
 
 @kernel
+def _product_at(p: int) -> tuple[int, int]:
+    """Column from which a panel takes its product, and how many columns share it.
+
+    What stands to the left of a wide panel enters for all of its columns at once; then what stands
+    within it, for all of a middle one; then the rest. Most of the work is done in large products.
+    """
+    if p % WIDE == 0:
+        return 0, WIDE
+    if p % _MIDDLE == 0:
+        return p - p % WIDE, _MIDDLE
+    return p - p % _MIDDLE, PANEL
+
+
+@kernel
 def _cholesky(blas: IntArray, side: int, square: FloatArray, inverse: FloatArray) -> bool:
     """Factor a square in place, and invert the triangles on its diagonal; False if it cannot be."""
     a = square.ctypes.data
-    for left in range(0, side, WIDE):
-        wide = min(WIDE, side - left)
-        if left:
-            rows, own = _at(a, left), _at(a, left * side + left)
-            sizes = (_NO, _TRANSPOSED, side - left, wide, left)
+    for p in range(0, side, PANEL):
+        left, reach = _product_at(p)
+        own = _at(a, p * side + p)
+        if p > left:
+            rows = _at(a, left * side + p)
+            sizes = (_NO, _TRANSPOSED, side - p, min(reach, side - p), p - left)
             call(blas[DGEMM], (*sizes, -1.0, rows, side, rows, side, 1.0, own, side))
-        for p in range(left, left + wide, PANEL):
-            width = min(PANEL, left + wide - p)
-            own = _at(a, p * side + p)
-            if p > left:
-                rows = _at(a, left * side + p)
-                sizes = (_NO, _TRANSPOSED, side - p, width, p - left)
-                call(blas[DGEMM], (*sizes, -1.0, rows, side, rows, side, 1.0, own, side))
-            triangle = inverse[p * PANEL :]
-            if not _factor_triangle(width, side, square, p * side + p, triangle):
-                return False
-            below = side - p - width
-            if below:
-                how = (_RIGHT, _LOWER, _TRANSPOSED, _NO, below, width)
-                small = triangle.ctypes.data
-                call(blas[DTRMM], (*how, 1.0, small, width, _at(own, width), side))
+        width = min(PANEL, side - p)
+        triangle = inverse[p * PANEL :]
+        if not _factor_triangle(width, side, square, p * side + p, triangle):
+            return False
+        below = side - p - width
+        if below:
+            how = (_RIGHT, _LOWER, _TRANSPOSED, _NO, below, width)
+            small = triangle.ctypes.data
+            call(blas[DTRMM], (*how, 1.0, small, width, _at(own, width), side))
     return True
 
 
@@ -114,22 +123,17 @@ def _divide(
 ) -> None:
     """Rows <- rows L^-T, with the inverses of the triangles on the diagonal of L."""
     a, x = square.ctypes.data, rows.ctypes.data
-    for left in range(0, side, WIDE):
-        wide = min(WIDE, side - left)
-        if left:
-            sizes = (_NO, _NO, wide, n_rows, left)
-            known = (-1.0, _at(a, left), side, x, side)
-            call(blas[DGEMM], (*sizes, *known, 1.0, _at(x, left), side))
-        for p in range(left, left + wide, PANEL):
-            width = min(PANEL, left + wide - p)
-            own = _at(x, p)
-            if p > left:
-                sizes = (_NO, _NO, width, n_rows, p - left)
-                known = (-1.0, _at(a, left * side + p), side, _at(x, left), side)
-                call(blas[DGEMM], (*sizes, *known, 1.0, own, side))
-            triangle = inverse[p * PANEL :].ctypes.data
-            how = (_LEFT, _LOWER, _NO, _NO, width, n_rows)
-            call(blas[DTRMM], (*how, 1.0, triangle, width, own, side))
+    for p in range(0, side, PANEL):
+        left, reach = _product_at(p)
+        own = _at(x, p)
+        if p > left:
+            sizes = (_NO, _NO, min(reach, side - p), n_rows, p - left)
+            known = (-1.0, _at(a, left * side + p), side, _at(x, left), side)
+            call(blas[DGEMM], (*sizes, *known, 1.0, own, side))
+        width = min(PANEL, side - p)
+        triangle = inverse[p * PANEL :].ctypes.data
+        how = (_LEFT, _LOWER, _NO, _NO, width, n_rows)
+        call(blas[DTRMM], (*how, 1.0, triangle, width, own, side))
 
 
 @kernel
@@ -371,8 +375,12 @@ def solve_blocks(
     if n_right == 0 or stride == 0:
         return
     square = np.empty(size.max() ** 2)
+    begun = False  # rates to the kept levels begin at low l: all above stays 0
     for block in range(len(size) - 1, -1, -1):  # y_l = L^-1 (r_l + X_l y_{l+1})
         side, own = size[block], _at(x, start[block])
+        begun = begun or bool(np.any(right[:, start[block] : start[block] + side]))
+        if not begun:
+            continue
         above = size[block + 1] if block + 1 < len(size) else 0
         if side and above:
             shape, known = (above, side), _at(x, start[block + 1])
