@@ -150,6 +150,22 @@ def _columns(labels: Sequence[str], width_pt: float, size_pt: float) -> int:
     return -(-len(labels) // rows) if rows else 1
 
 
+def label_stacked(figure: Figure) -> None:
+    """Name the vertical axis of every stacked panel: side by side the first of a row does it."""
+    before = ""
+    for axes in figure.axes:
+        if axes.get_label() == "<colorbar>" or not axes.get_visible():
+            continue
+        if not axes.get_ylabel() and before and not _in_words(axes):
+            axes.set_ylabel(before)
+        before = axes.get_ylabel()
+
+
+def _in_words(axes: Axes) -> bool:
+    """Whether names stand at the ticks of the vertical axis, which then needs no other."""
+    return any(any(map(str.isalpha, one.get_text())) for one in axes.get_yticklabels())
+
+
 def panel_letter(axes: Axes, letter: str) -> None:
     """Name a panel "(a)" above its upper left corner, where no curve runs."""
     axes.set_title(f"({letter})", loc="left", fontweight="bold", fontsize=8.5, pad=4.0)

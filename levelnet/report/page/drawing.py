@@ -84,6 +84,7 @@ def picture(make: Callable[[], Figure], name: str, title: str, alternative: str)
     if wide:
         with style.stacked():
             figure = make()
+            style.label_stacked(figure)
         drawn += inline_svg(figure, f"{name}-stacked", title, alternative, stacked=True)
     return Picture(name, title, alternative, drawn)
 

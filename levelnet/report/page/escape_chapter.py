@@ -190,8 +190,8 @@ def _pictures(study: EscapeStudy, found: EscapeVerdict, prefix: str) -> tuple[Pi
             partial(treatment_figure, study),
             f"{prefix}-treatments",
             "Treatments without a field against the reference",
-            "Relative difference of x_e in per cent against redshift, all treatments (left) and "
-            f"those that are close (right). The largest: {_worst(study, found)}.",
+            "Relative difference of x_e in per cent against redshift, all treatments (a) and "
+            f"those that are close (b). The largest: {_worst(study, found)}.",
         ),
         picture(
             partial(switch_figure, study),
@@ -204,7 +204,7 @@ def _pictures(study: EscapeStudy, found: EscapeVerdict, prefix: str) -> tuple[Pi
             partial(escape_channel_figure, study),
             f"{prefix}-channels",
             "How atoms reach the ground state in the reference",
-            f"Shares of the channels at each redshift (left) and since the start (right). "
+            f"Shares of the channels at each redshift (a) and since the start (b). "
             f"{most_through(study.channels)}",
         ),
     ]

@@ -106,8 +106,8 @@ def _steps(history: FastHistory) -> Facts:
 def _pictures(history: FastHistory, setup: Setup, prefix: str) -> tuple[Picture, ...]:
     z, x_e = history.redshift, history.free_electron_fraction
     said = (
-        f"Left: free electrons per hydrogen nucleus fall from {x_e[0]:.4g} at z = {z[0]:g} to "
-        f"{x_e[-1]:.3g} at z = {z[-1]:g}, on a logarithmic axis. Right: matter and radiation "
+        f"(a) Free electrons per hydrogen nucleus fall from {x_e[0]:.4g} at z = {z[0]:g} to "
+        f"{x_e[-1]:.3g} at z = {z[-1]:g}, on a logarithmic axis. (b) Matter and radiation "
         f"temperature against 1 + z; at z = {z[-1]:g} matter is at "
         f"{history.matter_temperature_k[-1]:.4g} K."
     )

@@ -40,7 +40,7 @@ def history_said(history: History) -> Said:
         ),
         "channels": (
             "How atoms reach the ground state",
-            "Shares of the channels at each redshift (left) and since the start (right). "
+            "Shares of the channels at each redshift (a) and since the start (b). "
             f"{most_through(history.channels)}",
         ),
         "visibility": ("Visibility", _visibility(history)),
@@ -53,9 +53,9 @@ def history_said(history: History) -> Said:
 def _ionization(history: History) -> str:
     z, x_e, matter = history.redshift, history.free_electron_fraction, history.matter_temperature_k
     return (
-        f"Left: free electrons per hydrogen nucleus fall from {x_e[0]:.4g} at z = {z[0]:g} to "
+        f"(a) Free electrons per hydrogen nucleus fall from {x_e[0]:.4g} at z = {z[0]:g} to "
         f"{x_e[-1]:.3g} at z = {z[-1]:g}, and neutral hydrogen rises to "
-        f"{history.neutral_hydrogen_fraction[-1]:.4g}, on a logarithmic axis. Right: matter and "
+        f"{history.neutral_hydrogen_fraction[-1]:.4g}, on a logarithmic axis. (b) Matter and "
         f"radiation temperature against 1 + z; at z = {z[-1]:g} matter is at {matter[-1]:.4g} K "
         f"and radiation at {history.radiation_temperature_k[-1]:.4g} K."
     )

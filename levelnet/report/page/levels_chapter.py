@@ -171,8 +171,8 @@ def _pictures(study: LevelStudy, prefix: str) -> tuple[Picture, ...]:
             partial(level_figure, study),
             f"{prefix}-levels",
             "Truncation error",
-            "Relative error of x_e against n_max (left), close to the limit of all levels "
-            f"(middle) and of each rung against redshift (right). At z = {study.redshift[late]:.0f}"
+            "Relative error of x_e against n_max (a), close to the limit of all levels "
+            f"(b) and of each rung against redshift (c). At z = {study.redshift[late]:.0f}"
             f" it falls from {signed_percent(errors[0, late])} at n_max = {n_max[0]} to "
             f"{signed_percent(errors[-1, late])} at n_max = {n_max[-1]}.",
         )

@@ -145,8 +145,8 @@ def _pictures(sweep: Sweep, prefix: str) -> tuple[Picture, ...]:
             else "The colour runs from dark to light through the cases in their order."
         )
         said = (
-            f"x_e of {len(drawn)} cases against redshift, on a logarithmic axis (left), and its "
-            f"difference in per cent from case {drawn[0]} (right). At the last output of each it "
+            f"x_e of {len(drawn)} cases against redshift, on a logarithmic axis (a), and its "
+            f"difference in per cent from case {drawn[0]} (b). At the last output of each it "
             f"lies between {min(ends):.4g} and {max(ends):.4g}. {named}"
         )
     return (
