@@ -7,6 +7,7 @@ Anderton & Renslow 2018, PLoS ONE 13, e0199239) and the brown-to-teal diverging 
 
 from __future__ import annotations
 
+import re
 from collections.abc import Iterator, Sequence
 from contextlib import contextmanager
 from contextvars import ContextVar
@@ -151,24 +152,42 @@ def _columns(labels: Sequence[str], width_pt: float, size_pt: float) -> int:
 
 
 def label_stacked(figure: Figure) -> None:
-    """Name the vertical axis of every stacked panel: side by side the first of a row does it."""
+    """Adapt the labels of stacked panels: side by side the first of a row names the axis of all.
+
+    Where names stand beside a panel it is narrow, and what is above and below it needs their room.
+    """
     before = ""
     for axes in figure.axes:
         if axes.get_label() == "<colorbar>" or not axes.get_visible():
             continue
-        if not axes.get_ylabel() and before and not _in_words(axes):
+        if _in_words(axes):
+            axes.xaxis.set_label_coords(1.0, -0.16)
+            axes.xaxis.label.set_horizontalalignment("right")
+            panel_letter(axes, axes.get_title(loc="left").strip("()"), place=-0.5)
+        elif not axes.get_ylabel() and before:
             axes.set_ylabel(before)
         before = axes.get_ylabel()
 
 
 def _in_words(axes: Axes) -> bool:
     """Whether names stand at the ticks of the vertical axis, which then needs no other."""
-    return any(any(map(str.isalpha, one.get_text())) for one in axes.get_yticklabels())
+    plain = [re.sub(r"\$[^$]*\$", "", one.get_text()) for one in axes.get_yticklabels()]
+    return any(any(map(str.isalpha, one)) for one in plain)
 
 
-def panel_letter(axes: Axes, letter: str) -> None:
-    """Name a panel "(a)" above its upper left corner, where no curve runs."""
-    axes.set_title(f"({letter})", loc="left", fontweight="bold", fontsize=8.5, pad=4.0)
+def panel_letter(axes: Axes, letter: str, place: float = 0.0) -> None:
+    """Name a panel "(a)" above its upper left corner, where no curve runs.
+
+    Parameters
+    ----------
+    axes : matplotlib Axes
+        The panel.
+    letter : str
+        Its name.
+    place : float, dimensionless
+        Where, over the width of the panel; 0 is its corner.
+    """
+    axes.set_title(f"({letter})", loc="left", x=place, fontweight="bold", fontsize=8.5, pad=4.0)
 
 
 def render(figure: Figure, file_format: str) -> bytes:

@@ -7,8 +7,9 @@ from dataclasses import dataclass, field
 from typing import ClassVar
 
 _WARNING = "warning: "
-# Letters of 0.9 rem that a line of a phone holds, and what a column has beside its own.
-_PHONE, _BESIDE = 45, 2
+# Letters of 0.9 rem that a line of a phone holds, what a column has beside its own, and the least
+# that page.css gives to the names of rows of numbers.
+_PHONE, _BESIDE, _NAME = 39, 2, 11
 UNKNOWN = "unknown"
 """What a file that does not state something is taken to say."""
 
@@ -64,10 +65,13 @@ class Table:
     def broad(self) -> bool:
         """Whether it is broader than a phone, by the letters of its columns."""
         letters = 0
-        for column in zip(self.head, *self.rows, strict=True):
-            cells = " ".join(column[1:]).split() if not self.numeric else column[1:]
-            words = max(map(len, [*column[0].split(), *cells]), default=0)
-            letters += words + _BESIDE
+        for k, column in enumerate(zip(self.head, *self.rows, strict=True)):
+            # Names and texts wrap at blanks, numbers do not.
+            whole = self.numeric and k > 0
+            cells = column[1:] if whole else " ".join(column[1:]).split()
+            least = _NAME if self.numeric and k == 0 else 0
+            widest = max(map(len, [*column[0].split(), *cells]), default=0)
+            letters += max(widest, least) + _BESIDE
         return letters > _PHONE
 
 
