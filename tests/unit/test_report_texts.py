@@ -34,7 +34,6 @@ from levelnet.report.sweep import sweep_figure
 from levelnet.studies.groups import top_transitions
 from levelnet.studies.level_records import Question
 from levelnet.studies.sweep_record import Sweep
-from tests.helium_tables import helium_table
 from tests.invented_escape import with_differences
 from tests.invented_history import history_with_field, invented_history
 from tests.invented_sweep import invented as invented_sweep
@@ -268,7 +267,3 @@ def test_tables_know_when_they_are_broader_than_a_phone() -> None:
     assert broad.broad and not narrow.broad
     text = Table("caption", ("a", "b"), (("word " * 50, "word " * 50),), numeric=False)
     assert not text.broad  # its words wrap
-
-
-def test_table_with_helium_has_a_page() -> None:
-    assert helium_table().helium is not None and "Effective rates" in page_of("helium table")
