@@ -84,7 +84,7 @@ def case_names(sweep: Sweep, drawn: Sequence[int], width_pt: float) -> list[str]
     telling = [
         (key, column)
         for key, column in zip(short_keys(sweep.swept), sweep.columns, strict=True)
-        if len({_value(column[k]) for k in drawn}) > 1
+        if len({str(column[k]) for k in drawn}) > 1  # "nan" where it is left out
     ]
     long = [
         f"{k}: " + ", ".join(f"{key} {_value(column[k])}" for key, column in telling) for k in drawn

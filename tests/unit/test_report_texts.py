@@ -190,6 +190,7 @@ def test_legend_of_a_sweep_lies_inside_its_figure(n_keys: int, narrow: bool) -> 
     names = [one.get_text() for one in legend.get_texts()]
     numbers = [int(re.findall(r"\d+", one)[0]) for one in names]
     assert numbers == [0, 1, 3, 4, 6, 7]
+    assert (names[0] == "case 0") == (n_keys == 6)  # too long for one line
     if n_keys == 3:  # what tells the cases apart, and nothing that all have in common
         assert names[0] == "0: baryon_density_h2 1e-12, cmb_temperature_k 0.1"
 
