@@ -5,7 +5,7 @@ from __future__ import annotations
 from ...studies.budget_record import ErrorBudget
 from ...studies.groups import by_level, top_transitions
 from ...studies.weighing import Weighing
-from ..weights import file_names, weighing_makers
+from ..weights import PROCESSES, file_names, weighing_makers
 from .content import Block, Chapter, Facts, Origin, Picture, Section, Table
 from .drawing import picture
 from .helium_parts import helium_ranking_said, weighing_tables
@@ -153,7 +153,7 @@ def _ranking_said(weighing: Weighing, target: str) -> str:
     at, own = weighing.index(target), weighing.processes(target)
     parameters = zip(weighing.parameters, weighing.parameter[at].tolist(), strict=True)
     parts = [
-        largest_said("processes", own.items()),
+        largest_said("processes", ((text, own[name]) for name, text in PROCESSES.items())),
         largest_said("parameters", parameters),
         largest_said("transitions", ((one.name, one.weight) for one in lines)),
         largest_said("cross sections", sections),
