@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING
 
 import numpy as np
 
@@ -140,18 +140,31 @@ class FastHistory:
             frozen_array(self, name, (len(self.redshift),))
 
     def to_xarray(self) -> xarray.Dataset:
-        """The arrays over redshift as an xarray Dataset (needs the xarray extra)."""
+        """The arrays over redshift as an xarray Dataset (needs the xarray extra).
+
+        Returns
+        -------
+        xarray.Dataset
+            Each array says `units` and `long_name`; the whole says outcome, notes and the version
+            of levelnet. The setup is that of the table, which this record does not hold.
+        """
         import xarray
 
+        from ..history.labelled import made_by, over_redshift
+
         names = (
+            "redshift",
             "free_electron_fraction",
             "ionized_hydrogen_fraction",
             "neutral_hydrogen_fraction",
             "matter_temperature_k",
             "radiation_temperature_k",
         )
-        arrays: dict[str, Any] = {name: ("redshift", getattr(self, name)) for name in names}
-        return xarray.Dataset(arrays, coords={"redshift": self.redshift})
+        arrays = over_redshift(self, names)
+        if self.helium is not None:
+            arrays |= over_redshift(self.helium, FastHelium.__slots__)
+        said = {"outcome": self.outcome.value, "notes": "\n".join(self.notes)}
+        return xarray.Dataset(arrays, attrs=said | made_by())
 
     def _repr_html_(self) -> str:
         """Show a small table in a notebook."""

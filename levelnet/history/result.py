@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING
 
 import numpy as np
 
@@ -112,12 +112,9 @@ class RadiationField:
 
     def to_xarray(self) -> xarray.Dataset:
         """The field over redshift and photon energy as an xarray Dataset (needs the extra)."""
-        import xarray
+        from .labelled import field_dataset
 
-        return xarray.Dataset(
-            {"log_distortion": (("redshift", "photon_energy_ev"), self.log_distortion)},
-            coords={"redshift": self.redshift, "photon_energy_ev": self.photon_energy_ev},
-        )
+        return field_dataset(self)
 
 
 @dataclass(frozen=True, slots=True)
@@ -324,13 +321,19 @@ class History:
         raise InputError(f'species "{name}": not in this history; known: {known or "none"}')
 
     def to_xarray(self) -> xarray.Dataset:
-        """The arrays over redshift as an xarray Dataset (needs the xarray extra)."""
-        import xarray
+        """The result as an xarray Dataset (needs the xarray extra).
 
-        arrays: dict[str, Any] = {
-            name: ("redshift", getattr(self, name)) for name in HISTORY_ARRAYS
-        }
-        return xarray.Dataset(arrays, coords={"redshift": self.redshift})
+        Returns
+        -------
+        xarray.Dataset
+            The arrays over redshift; populations, ln of departure coefficients and quantum numbers
+            of each species ("population_h_i", ...); the channels of hydrogen; the radiation field,
+            if there is one, over redshifts of its own. Each says `units` and `long_name`; the
+            whole names title, setup and its digest, outcome, notes and the version of levelnet.
+        """
+        from .labelled import history_dataset
+
+        return history_dataset(self)
 
     def __repr__(self) -> str:
         """One line: the range, the size, the outcome."""

@@ -20,7 +20,7 @@ if TYPE_CHECKING:
 
 _VECTOR_N_MAX = 60  # above, the cells of the map are drawn as pixels: 5e4 outlines choke a viewer
 _N_PANELS = 4
-_MOST_TICKS = 9
+_MOST_TICKS, _FEWEST_TICKS = 9, 3
 _LETTERS = "spdf"
 
 
@@ -131,7 +131,7 @@ def departure_curves_figure(
     InputError
         If a redshift lies outside the outputs, or the species is not in the history.
     """
-    levels, rows = _drawable(history, species), _panel_rows(history, redshifts)
+    levels, rows = _drawable(history, species), panel_rows(history, redshifts)
     with style.house_style():
         figure = style.new_figure(style.TWO_COLUMNS_IN, 4.6 if len(rows) > 2 else 2.5)
         shape = (2, 2) if len(rows) > 2 else (1, len(rows))
@@ -159,7 +159,8 @@ def output_row(history: History, redshift: float | None) -> int:
     return int(np.argmin(np.abs(history.redshift - redshift)))
 
 
-def _panel_rows(history: History, redshifts: tuple[float, ...] | None) -> list[int]:
+def panel_rows(history: History, redshifts: tuple[float, ...] | None = None) -> list[int]:
+    """Indices of the outputs that :func:`departure_curves_figure` draws, each once, ascending."""
     if redshifts is None:
         high, low = float(history.redshift[0]), float(history.redshift[-1])
         # The redshifts where the network changes its character, as far as the history has them.
@@ -254,6 +255,8 @@ def _colour_scale(grid: FloatArray) -> tuple[Normalize, str]:
 
 def _round_values(low: float, high: float) -> list[float]:
     """Round values from `low` to `high`: as fine as leaves room for, each decade alike."""
+    from matplotlib.ticker import MaxNLocator
+
     size = max(abs(low), abs(high))
     if size == 0.0:
         return [0.0]
@@ -266,11 +269,15 @@ def _round_values(low: float, high: float) -> list[float]:
         kept = [one for one in inside if one == 0.0 or abs(one) > 0.02 * size or low * high > 0.0]
         if len(kept) <= _MOST_TICKS:
             break
-    return kept
+    if len(kept) >= _FEWEST_TICKS:
+        return kept
+    # Less than a decade: evenly spaced values are finer than those above.
+    even = MaxNLocator(5, min_n_ticks=_FEWEST_TICKS).tick_values(low, high)
+    return [float(one) for one in even if low <= one <= high]
 
 
 def _number(value: float) -> str:
-    return f"{value:g}".replace("-", "\N{MINUS SIGN}")
+    return f"{value:.6g}".replace("-", "\N{MINUS SIGN}")
 
 
 def _whole_numbers(axes: Axes) -> None:

@@ -10,15 +10,13 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from ..arrays import FloatArray
-from ..atomic.levels import hydrogenic_levels
-from ..atomic.physics import scales
 from ..studies.escape_notes import asked_range
 from ..studies.escape_records import EscapeStudy
 from ..studies.escape_verdict import differences, switch_effects
 from . import style
 from .figures import check_place, save_drawn
 from .plots import shares_figure
-from .spectrum import field_figure
+from .spectrum import field_figure, marked_levels
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
@@ -29,7 +27,6 @@ _BEFORE = {"H I": "", "He I": "helium-"}
 _SPECTRUM = "escape-spectrum"  # only of a reference that resolves the field
 _SPECTRA_AT = (1500.0, 1300.0, 1100.0, 900.0, 700.0)
 _LONG_NAME = 45  # letters of a name of which no three fit side by side
-_MARKED_N = 10  # Lyman lines are marked up to this n
 # Differences beyond are those of treatments that are no more than bounds.
 _NEAR = {"H I": 0.1, "He I": 0.005}
 
@@ -197,16 +194,9 @@ def escape_spectrum_figure(study: EscapeStudy) -> Figure:
         As of :func:`levelnet.report.spectrum.field_figure`.
     """
     assert study.field is not None
-    hydrogen, unit = study.setup.hydrogen, scales(study.setup.physics).energy
-    levels = hydrogenic_levels(min(hydrogen.n_max, _MARKED_N), hydrogen.energies)
-    levels = dataclasses.replace(
-        levels,
-        energy_ev=levels.energy_ev * unit,
-        ionization_energy_ev=levels.ionization_energy_ev * unit,
-    )
     high, low = float(study.field.redshift[0]), float(study.field.redshift[-1])
     shown = [z for z in _SPECTRA_AT if low <= z <= high]
-    return field_figure(study.field, levels, shown or None)
+    return field_figure(study.field, marked_levels(study.setup), shown or None)
 
 
 def _draw(

@@ -100,13 +100,7 @@ def helium_departures_figure(
     InputError
         If helium is inert, or a redshift lies outside the outputs.
     """
-    levels = _of_helium(history)
-    high, low = float(history.redshift[0]), float(history.redshift[-1])
-    if redshifts is None:
-        redshifts = tuple(z for z in _PANELS_AT if low <= z <= high) or (high,)
-    if not 1 <= len(redshifts) <= len(_PANELS_AT):
-        raise InputError(f"redshifts: {len(redshifts)} given, allowed are 1 to {len(_PANELS_AT)}")
-    rows = sorted({output_row(history, z) for z in redshifts})
+    levels, rows = _of_helium(history), helium_panel_rows(history, redshifts)
     with style.house_style():
         figure = style.new_figure(style.TWO_COLUMNS_IN, 4.8 if len(rows) > 2 else 2.7)
         shape = (2, 2) if len(rows) > 2 else (1, len(rows))
@@ -126,6 +120,16 @@ def helium_departures_figure(
     return figure
 
 
+def helium_panel_rows(history: History, redshifts: tuple[float, ...] | None = None) -> list[int]:
+    """Indices of the outputs that :func:`helium_departures_figure` draws, each once, ascending."""
+    high, low = float(history.redshift[0]), float(history.redshift[-1])
+    if redshifts is None:
+        redshifts = tuple(z for z in _PANELS_AT if low <= z <= high) or (high,)
+    if not 1 <= len(redshifts) <= len(_PANELS_AT):
+        raise InputError(f"redshifts: {len(redshifts)} given, allowed are 1 to {len(_PANELS_AT)}")
+    return sorted({output_row(history, z) for z in redshifts})
+
+
 def helium_lines_figure(history: History) -> Figure:
     """How the lines of He I to its ground state fare, and what their treatment leaves out.
 
@@ -140,7 +144,7 @@ def helium_lines_figure(history: History) -> Figure:
         (a) Share of the net flow. (b) Escape probability; dotted: Sobolev's. (c) Absorption by
         hydrogen within the width that is thick to absorption. (d) Estimated change of x_e, in per
         cent, by escape with all that is known of it (full) and by feedback that is left out
-        (dotted); grey: where a history carries a warning.
+        (dotted); grey: where a history carries no warning. Left out where that is not estimated.
 
     Raises
     ------
@@ -151,8 +155,9 @@ def helium_lines_figure(history: History) -> Figure:
     assert history.helium is not None
     lines = history.helium.lines
     with style.house_style():
-        figure = style.new_figure(style.TWO_COLUMNS_IN, 4.8)
-        panels = figure.subplots(2, 2, sharex=True).ravel()
+        judged = lines_judged(history)
+        figure = style.new_figure(style.TWO_COLUMNS_IN, 4.8 if judged else 2.9)
+        panels = figure.subplots(2, 2, sharex=True).ravel() if judged else figure.subplots(1, 3)
         for k, line in enumerate(_shown_lines(history, lines)):
             _draw_line(panels, history.redshift, lines, line, style.SERIES[k % len(style.SERIES)])
         titles = (
@@ -164,11 +169,12 @@ def helium_lines_figure(history: History) -> Figure:
         panels[1].set_yscale("log")
         panels[2].set_yscale("log")
         panels[2].axhline(1.0, color=style.GREY, linewidth=0.6, linestyle=":")
-        panels[3].axhspan(-_LIMIT, _LIMIT, color=style.GREY, alpha=0.25, linewidth=0.0)
+        if judged:
+            panels[3].axhspan(-_LIMIT, _LIMIT, color=style.GREY, alpha=0.25, linewidth=0.0)
         seen = history.redshift[history.neutral_helium_fraction > _LEAST_FRACTION]
         low, high = _shown_range(history)
         high = float(seen[0]) if len(seen) and seen[0] > low else high
-        for axes, title, letter in zip(panels, titles, "abcd", strict=True):
+        for axes, title, letter in zip(panels, titles, "abcd", strict=False):
             axes.set_ylabel(title)
             axes.set_xlim(low, high)
             style.panel_letter(axes, letter)
@@ -186,8 +192,20 @@ def _draw_line(
     panels[1].plot(redshift, lines.escape_probability[:, line], color=colour)
     panels[1].plot(redshift, sobolev, ":", color=colour, linewidth=1.0)
     panels[2].plot(redshift, lines.continuum_in_line[:, line], color=colour)
-    panels[3].plot(redshift, 100.0 * lines.escape_error[:, line], color=colour)
-    panels[3].plot(redshift, 100.0 * lines.feedback_error[:, line], ":", color=colour)
+    if len(panels) > 3:
+        panels[3].plot(redshift, 100.0 * lines.escape_error[:, line], color=colour)
+        panels[3].plot(redshift, 100.0 * lines.feedback_error[:, line], ":", color=colour)
+
+
+def lines_judged(history: History) -> bool:
+    """Whether any line that is drawn has an estimate of what its treatment leaves out."""
+    if history.helium is None:
+        return False
+    lines, (low, high) = history.helium.lines, _shown_range(history)
+    inside = (history.redshift >= low) & (history.redshift <= high)
+    shown = _shown_lines(history, lines)
+    left_out = lines.escape_error[inside][:, shown], lines.feedback_error[inside][:, shown]
+    return any(bool(np.isfinite(one).any()) for one in left_out)
 
 
 def _of_helium(history: History) -> HeliumLevels:

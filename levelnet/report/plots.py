@@ -15,7 +15,7 @@ if TYPE_CHECKING:
     from matplotlib.axes import Axes
     from matplotlib.figure import Figure
 
-_EARLY = 3000.0  # outputs from above this redshift leave the right half of the fractions empty
+_SHORT = 5.0  # the largest over the smallest of an axis whose ticks are spaced evenly
 _CURVES = 5  # channels drawn one by one; the rest is summed into one curve
 
 
@@ -39,6 +39,10 @@ def history_figure(history: History | FastHistory) -> Figure:
         _draw_temperatures(right, history)
         style.panel_letter(left, "a")
         style.panel_letter(right, "b")
+        # Outside, since over a short range curves run anywhere.
+        drawn = [axes.get_legend_handles_labels() for axes in (left, right)]
+        handles, labels = ([*first, *second] for first, second in zip(*drawn, strict=True))
+        figure.legend(handles, labels, loc="outside upper center")
     return figure
 
 
@@ -60,10 +64,6 @@ def _draw_fractions(axes: Axes, history: History | FastHistory) -> None:
     axes.set_ylabel("fraction of hydrogen nuclei")
     if isinstance(history, History):
         _mark_redshift(axes, history.milestones.half_ionized_redshift, "$x_e = 0.5$")
-    if redshift[0] > _EARLY:
-        axes.legend(loc="center right")  # right of where both fall
-    else:  # below the curves near 1 and above the tail of x_e
-        axes.legend(loc="upper left", bbox_to_anchor=(0.0, 0.86))
 
 
 def _draw_temperatures(axes: Axes, history: History | FastHistory) -> None:
@@ -73,10 +73,10 @@ def _draw_temperatures(axes: Axes, history: History | FastHistory) -> None:
     )
     axes.loglog(stretch, history.matter_temperature_k, "-", color=style.BLUE, label=r"matter $T_m$")
     axes.set_xlim(float(stretch[-1]), float(stretch[0]))
-    _plain_numbers(axes, "x")
+    for which in ("x", "y"):
+        _plain_numbers(axes, which)
     axes.set_xlabel(r"$1 + z$")
     axes.set_ylabel("temperature (K)")
-    axes.legend(loc="upper left")
 
 
 def channel_figure(history: History) -> Figure:
@@ -275,10 +275,23 @@ def _mark_redshift(axes: Axes, redshift: float, label: str, at_top: bool = False
 
 
 def _plain_numbers(axes: Axes, which: str) -> None:
-    """Write 20, 100, 1000 on a logarithmic axis rather than powers of ten."""
-    from matplotlib.ticker import LogLocator, NullFormatter, StrMethodFormatter
+    """Write 20, 100, 1000 on a logarithmic axis rather than powers of ten; x or, if short, y."""
+    from matplotlib.ticker import (
+        LogLocator,
+        MaxNLocator,
+        NullFormatter,
+        NullLocator,
+        StrMethodFormatter,
+    )  # fmt: skip
 
     axis = axes.xaxis if which == "x" else axes.yaxis
-    axis.set_major_locator(LogLocator(subs=(1.0, 2.0, 5.0)))
+    low, high = sorted(axis.get_view_interval())
+    if high < _SHORT * low:  # hardly any of 1, 2 and 5 lies in it
+        axis.set_major_locator(MaxNLocator(5, min_n_ticks=3))
+        axis.set_minor_locator(NullLocator())
+    elif which == "y":
+        return
+    else:
+        axis.set_major_locator(LogLocator(subs=(1.0, 2.0, 5.0)))
     axis.set_major_formatter(StrMethodFormatter("{x:g}"))
     axis.set_minor_formatter(NullFormatter())

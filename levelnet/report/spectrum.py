@@ -3,14 +3,17 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from dataclasses import replace
 from typing import TYPE_CHECKING
 
 import numpy as np
 
 from ..arrays import FloatArray
-from ..atomic.levels import LevelSet
+from ..atomic.levels import LevelSet, hydrogenic_levels
+from ..atomic.physics import scales
 from ..errors import InputError
 from ..history.result import History, RadiationField
+from ..history.setup import Setup
 from . import style
 
 if TYPE_CHECKING:
@@ -22,6 +25,7 @@ _CURVES = 5
 _EARLIEST, _LATEST = 1500.0, 700.0  # redshifts of the curves where none are asked for
 _WINGS = 0.01  # half the width over frequency of the close view
 _NAMES = (r"Ly $\alpha$", r"$\beta$", r"$\gamma$", r"$\delta$")
+_MARKED_N = 10  # Lyman lines are marked up to this n
 _LINES_MARKED = 8  # from there on the lines stand closer than the strokes that mark them
 
 
@@ -82,6 +86,17 @@ def field_figure(
         # Outside, since spectra fill either panel.
         figure.legend(*left.get_legend_handles_labels(), loc="outside upper center", ncols=5)
     return figure
+
+
+def marked_levels(setup: Setup) -> LevelSet:
+    """Levels of hydrogen whose Lyman lines a figure of a setup marks."""
+    unit = scales(setup.physics).energy
+    levels = hydrogenic_levels(min(setup.hydrogen.n_max, _MARKED_N), setup.hydrogen.energies)
+    return replace(
+        levels,
+        energy_ev=levels.energy_ev * unit,
+        ionization_energy_ev=levels.ionization_energy_ev * unit,
+    )
 
 
 def draw_spectrum(

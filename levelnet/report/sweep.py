@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -14,7 +15,10 @@ if TYPE_CHECKING:
     from matplotlib.axes import Axes
     from matplotlib.figure import Figure
 
-_FEW = 7  # cases that are told apart by colour and dash, with a legend
+FEW = 7
+"""Cases that are told apart by colour and dash, with a legend."""
+_LEGEND_PT = 6.5
+_LONGEST_TEXT = 20  # letters of a value
 
 
 def sweep_figure(sweep: Sweep) -> Figure:
@@ -29,17 +33,18 @@ def sweep_figure(sweep: Sweep) -> Figure:
     -------
     matplotlib Figure
         Left: x_e (dimensionless, logarithmic) against redshift. Right: x_e over that of the first
-        case that may be used, less 1, in per cent, at its redshifts. Few cases are named; of more
-        the colour runs through the cases in their order.
+        case that may be used, less 1, in per cent, at its redshifts. Few cases are named by their
+        numbers and by what tells them apart; of more the colour runs through the cases in order.
     """
     drawn = drawn_cases(sweep)
     with style.house_style():
         figure = style.new_figure(style.TWO_COLUMNS_IN, 3.1)
         left, right = figure.subplots(1, 2)
-        for place, k in enumerate(drawn):
+        names = case_names(sweep, drawn, 72.0 * figure.get_figwidth())
+        for place, (k, name) in enumerate(zip(drawn, names, strict=True)):
             look = _look(place, len(drawn))
             redshift, x_e = case_curve(sweep, k)
-            left.plot(redshift, x_e, label=sweep.label(k), **look)
+            left.plot(redshift, x_e, label=name, **look)
             first, difference = _difference(sweep, drawn[0], k)
             right.plot(first, difference, **look)
         left.set_yscale("log")
@@ -52,10 +57,49 @@ def sweep_figure(sweep: Sweep) -> Figure:
             style.panel_letter(axes, letter)
         if not drawn:
             _say_empty(left)
-        elif len(drawn) <= _FEW:
+        elif len(drawn) <= FEW:
             handles, labels = left.get_legend_handles_labels()
-            figure.legend(handles, labels, loc="outside upper center", ncols=2, fontsize=6.5)
+            figure.legend(handles, labels, loc="outside upper center", ncols=3, fontsize=_LEGEND_PT)
     return figure
+
+
+def short_keys(keys: Sequence[str]) -> tuple[str, ...]:
+    """Swept keys by their last parts, or as they are where two would then be the same."""
+    last = tuple(key.rpartition(".")[2] for key in keys)
+    return last if len(set(last)) == len(last) else tuple(keys)
+
+
+def case_names(sweep: Sweep, drawn: Sequence[int], width_pt: float) -> list[str]:
+    """Names of cases in a legend: their numbers, and what tells them apart.
+
+    Parameters
+    ----------
+    sweep : Sweep
+        Any.
+    drawn : sequence of int
+        Positions of the cases that are shown.
+    width_pt : float, points
+        Of the figure. Where one name would be wider, all are numbers alone.
+    """
+    telling = [
+        (key, column)
+        for key, column in zip(short_keys(sweep.swept), sweep.columns, strict=True)
+        if len({str(column[k]) for k in drawn}) > 1  # "nan" where it is left out
+    ]
+    long = [
+        f"{k}: " + ", ".join(f"{key} {_value(column[k])}" for key, column in telling) for k in drawn
+    ]
+    room_pt = width_pt - 4.0 * _LEGEND_PT  # what is left beside the stroke of the legend
+    if telling and max(style.text_width_pt(one, _LEGEND_PT) for one in long) < room_pt:
+        return long
+    return [f"case {k}" for k in drawn]
+
+
+def _value(value: object) -> str:
+    if isinstance(value, float):
+        return f"{value:.6g}" if np.isfinite(value) else "left out"
+    text = " ".join(str(value).split()).replace("$", r"\$")
+    return text if len(text) <= _LONGEST_TEXT else f"{text[:_LONGEST_TEXT]}..."
 
 
 def drawn_cases(sweep: Sweep) -> list[int]:
@@ -87,7 +131,7 @@ def _difference(sweep: Sweep, first: int, k: int) -> tuple[FloatArray, FloatArra
 
 def _look(place: int, count: int) -> dict[str, Any]:
     """Colour and dash of a curve."""
-    if count <= _FEW:
+    if count <= FEW:
         return {"color": style.SERIES[place], "linestyle": style.DASHES[place]}
     import matplotlib
 

@@ -38,13 +38,14 @@ _SYMBOLS = {
     "dark_energy_w0": "$w_0$",
     "dark_energy_wa": "$w_a$",
 }
-_PROCESSES = {
+PROCESSES = {
     "two_photon": "two-photon 2s-1s",
     "bound_bound": "bound-bound",
     "bound_free": "bound-free",
     "escape": "Lyman escape",
     "compton": "Compton",
 }
+"""Processes that a ranking shows, in words."""
 OBSERVABLE_SYMBOLS = {
     "last_scattering_redshift": "$z_*$",
     "visibility_peak_redshift": r"$z_{\mathrm{peak}}$",
@@ -206,7 +207,7 @@ def ranking_figure(weighing: Weighing, target: str) -> Figure:
 
 def _process_bars(axes: Axes, weighing: Weighing, at: int) -> None:
     processes = weighing.processes(weighing.targets[at])
-    values = {text: processes[name] for name, text in _PROCESSES.items()}
+    values = {text: processes[name] for name, text in PROCESSES.items()}
     parameters = zip(weighing.parameters, weighing.parameter[at], strict=True)
     values |= {_SYMBOLS.get(name, name): float(value) for name, value in parameters}
     ranked = sorted(values, key=lambda name: -abs(values[name]))

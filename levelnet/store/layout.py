@@ -11,6 +11,7 @@ checker has confirmed one.
 
 from __future__ import annotations
 
+from ..history.labelled import HISTORY_LABELS
 from .schema import Group, Kind, Layout, Variable, describe
 
 LAYOUT_NAME = "levelnet history"
@@ -59,31 +60,12 @@ def _population(name: str, long_name: str) -> Variable:
     return Variable(name, dimensions, "1", long_name, f"species.{name}", coordinates="n l")
 
 
-REDSHIFT = _z("redshift", "1", "redshift, descending")
+REDSHIFT = _z("redshift", *HISTORY_LABELS["redshift"])
 
 HISTORY = Group(
     "history",
     "ionization and thermal history; no reionization",
-    (
-        REDSHIFT,
-        _z("free_electron_fraction", "1", "free electrons per hydrogen nucleus"),
-        _z("ionized_hydrogen_fraction", "1", "ionized part of the hydrogen nuclei"),
-        _z("neutral_hydrogen_fraction", "1", "neutral part of the hydrogen nuclei"),
-        _z("neutral_helium_fraction", "1", "neutral part of the helium nuclei"),
-        _z("singly_ionized_helium_fraction", "1", "singly ionized part of the helium nuclei"),
-        _z("doubly_ionized_helium_fraction", "1", "doubly ionized part of the helium nuclei"),
-        _z("matter_temperature_k", "K", "matter temperature"),
-        _z("radiation_temperature_k", "K", "radiation temperature"),
-        _z("hydrogen_density_cm3", "cm-3", "number density of all hydrogen nuclei"),
-        _z("hubble_rate_per_s", "s-1", "expansion rate"),
-        _z("cosmic_time_s", "s", "time since the Big Bang"),
-        _z("optical_depth", "1", "Thomson optical depth from the lowest output redshift up"),
-        _z(
-            "visibility",
-            "megaparsec-1",
-            "visibility function (d tau / d eta) exp(-tau) per comoving length",
-        ),
-    ),
+    tuple(_z(name, *said) for name, said in HISTORY_LABELS.items()),
 )
 
 LINES = Group(

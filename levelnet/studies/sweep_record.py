@@ -10,6 +10,7 @@ import numpy as np
 
 from ..arrays import FloatArray, frozen_array
 from ..errors import Outcome
+from ..history.labelled import labelled, made_by
 from ..history.result import HISTORY_ARRAYS
 from ..markup import html_table
 from .sweep_cases import case_label
@@ -120,11 +121,13 @@ class Sweep:
         coordinates["redshift"] = (
             self.redshift if self.redshift.ndim == 1 else (rows, self.redshift)
         )
-        found: dict[str, Any] = {name: (rows, values) for name, values in self.arrays.items()}
+        found: dict[str, Any] = {
+            name: labelled(name, rows, values) for name, values in self.arrays.items()
+        }
         for name, unit in zip(self.observable_names, self.observable_units, strict=True):
             found[name] = ("case", self[name], {"units": unit})
         found |= {"outcome": ("case", list(self.outcome)), "reason": ("case", list(self.reason))}
-        return xarray.Dataset(found, coordinates)
+        return xarray.Dataset(found, coordinates, {"title": self.title, **made_by()})
 
     def _repr_html_(self) -> str:
         """Show the first cases in a notebook."""

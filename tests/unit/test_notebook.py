@@ -16,8 +16,11 @@ import pytest
 
 import levelnet
 from levelnet.errors import InputError
+from levelnet.history.result import History
+from levelnet.history.setup import parse_setup
 from levelnet.markup import html_table, html_text
 from levelnet.report.plot import makers_of
+from levelnet.store.layout import HISTORY
 from tests.small_runs import small_setup
 from tests.unit.test_report_page import record_of
 
@@ -73,6 +76,33 @@ def test_results_become_xarray(kind: str) -> None:
     if kind == "budget":
         one = data["bound_free"].sel(target=record.targets[0])
         assert np.array_equal(one, record.bound_free[0])
+
+
+@pytest.mark.parametrize("kind", ["history", "field", "fast", "sweep", "helium"])
+def test_arrays_in_xarray_say_what_they_are(kind: str) -> None:
+    record: Any = record_of(kind)[0]
+    data = record.to_xarray()
+    files = {one.name: (one.units, one.long_name) for one in HISTORY.variables}
+    assert data.attrs["levelnet_version"] == levelnet.__version__
+    for name in data.data_vars:
+        if name in files:  # the file of the same history says the same
+            assert (data[name].attrs["units"], data[name].attrs["long_name"]) == files[name]
+        elif kind != "sweep":
+            assert data[name].attrs["units"] and data[name].attrs["long_name"], name
+    if isinstance(record, History):
+        assert data.attrs["setup_digest"] == record.setup.digest
+        assert parse_setup(data.attrs["setup"], "setup") == record.setup
+        for one in record.species:
+            end = one.name.lower().replace(" ", "_")
+            assert np.array_equal(data[f"population_{end}"], one.population)
+            assert np.array_equal(data[f"log_departure_{end}"], one.log_departure, equal_nan=True)
+            assert np.array_equal(data[f"n_{end}"], one.levels.n)
+            assert np.array_equal(data[f"l_{end}"], one.levels.l)
+        assert ("spin_he_i" in data.coords) == (kind == "helium")
+    if kind == "field":
+        assert np.array_equal(data["log_distortion"], record.field.log_distortion)
+        alone = record.field.to_xarray()
+        assert alone["log_distortion"].attrs == data["log_distortion"].attrs
 
 
 @pytest.mark.parametrize("kind", KINDS)

@@ -147,9 +147,36 @@ def test_letters_are_large_enough_on_a_phone(pages: list[Path]) -> None:
         # Figures that are wider than the phone keep a scale at which 7 pt letters stay 7 px.
         scales = browser.evaluate(
             "[...document.querySelectorAll('figure svg')].map(one =>"
-            " one.getBoundingClientRect().width / one.viewBox.baseVal.width)"
+            " one.getBoundingClientRect().width / one.viewBox.baseVal.width).filter(one => one > 0)"
         )
+        assert len(scales) == browser.evaluate("document.querySelectorAll('figure').length")
         assert min(scales) >= 1.0
+
+
+_CUT = (
+    "[...document.querySelectorAll('.scroll, pre')].filter(one =>"
+    " one.scrollWidth > one.clientWidth + 1 && !(one.previousElementSibling &&"
+    " one.previousElementSibling.matches('.sideways') &&"
+    " one.previousElementSibling.getBoundingClientRect().height > 0))"
+    ".map(one => one.outerHTML.slice(0, 120))"
+)
+
+
+@pytest.mark.skipif(browser_path() is None, reason=NO_BROWSER)
+def test_nothing_is_cut_without_saying_so(pages: list[Path]) -> None:
+    with running_browser() as browser:
+        for width in WIDTHS:
+            browser.open(pages[0], width)
+            assert browser.evaluate(_CUT) == []
+            # Figures are never cut: where they would be, their panels stand under one another.
+            cut = "[...document.querySelectorAll('.drawing')].filter(one =>"
+            assert browser.evaluate(f"{cut} one.scrollWidth > one.clientWidth + 1).length") == 0
+        # The paper of page.css: A4 less its margins, at 96 px an inch.
+        browser.open(pages[0], 688)
+        browser.call("Emulation.setEmulatedMedia", media="print")
+        assert browser.evaluate("document.documentElement.scrollWidth") == 688
+        wide = "[...document.querySelectorAll('table, pre, svg')].filter(one =>"
+        assert browser.evaluate(f"{wide} one.getBoundingClientRect().right > 689).length") == 0
 
 
 @pytest.mark.skipif(browser_path() is None, reason=NO_BROWSER)

@@ -7,6 +7,9 @@ from dataclasses import dataclass, field
 from typing import ClassVar
 
 _WARNING = "warning: "
+# Letters of 0.9 rem that a line of a phone holds, what a column has beside its own, and the least
+# that page.css gives to the names of rows of numbers.
+_PHONE, _BESIDE, _NAME = 39, 2, 11
 UNKNOWN = "unknown"
 """What a file that does not state something is taken to say."""
 
@@ -58,6 +61,19 @@ class Table:
         if any(len(row) != len(self.head) for row in self.rows):
             raise ValueError(f"table {self.caption!r}: {len(self.head)} cells a row are needed")
 
+    @property
+    def broad(self) -> bool:
+        """Whether it is broader than a phone, by the letters of its columns."""
+        letters = 0
+        for k, column in enumerate(zip(self.head, *self.rows, strict=True)):
+            # Names and texts wrap at blanks, numbers do not.
+            whole = self.numeric and k > 0
+            cells = column[1:] if whole else " ".join(column[1:]).split()
+            least = _NAME if self.numeric and k == 0 else 0
+            widest = max(map(len, [*column[0].split(), *cells]), default=0)
+            letters += max(widest, least) + _BESIDE
+        return letters > _PHONE
+
 
 @dataclass(frozen=True, slots=True)
 class Facts:
@@ -80,7 +96,8 @@ class Picture:
     alternative : str
         What somebody learns from it who does not see it.
     svg : str
-        The drawing, from :func:`levelnet.report.page.drawing.inline_svg`.
+        The drawing, from :func:`levelnet.report.page.drawing.inline_svg`; after a wide one the same
+        with its panels under one another, of which a page shows either.
     """
 
     name: str
@@ -151,6 +168,8 @@ class Chapter:
         The short answer, before everything else.
     sections : tuple of Section
         All else.
+    word : str
+        What stands in bold before `outcome`; empty for the usual where `ok` is what it is.
     """
 
     name: str
@@ -161,3 +180,4 @@ class Chapter:
     outcome: str
     answers: tuple[str, ...]
     sections: tuple[Section, ...] = field(default=())
+    word: str = ""

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import re
 import xml.etree.ElementTree as ET
+from collections.abc import Callable
 from typing import TYPE_CHECKING
 
 from .. import style
@@ -18,7 +19,9 @@ _NARROW_PT = 300.0  # a figure of one column, which a phone shows whole
 _LONG_NUMBER = re.compile(r"-?\d+\.\d{3,}")
 
 
-def inline_svg(figure: Figure, name: str, title: str, alternative: str) -> str:
+def inline_svg(
+    figure: Figure, name: str, title: str, alternative: str, stacked: bool = False
+) -> str:
     """Draw a figure as an ``svg`` element of HTML that has a name and a description.
 
     Parameters
@@ -30,6 +33,8 @@ def inline_svg(figure: Figure, name: str, title: str, alternative: str) -> str:
         stand in one page must not share any.
     title, alternative : str
         What the figure shows, and what somebody learns from it who does not see it.
+    stacked : bool
+        Whether it stands for another one where the screen is narrow.
 
     Returns
     -------
@@ -49,8 +54,9 @@ def inline_svg(figure: Figure, name: str, title: str, alternative: str) -> str:
         element.text = text
         root.insert(place, element)
     width, height = (root.attrib.pop(one).removesuffix("pt") for one in ("width", "height"))
+    kind = "narrow" if float(width) < _NARROW_PT else "wide"
     root.attrib |= {
-        "class": "narrow" if float(width) < _NARROW_PT else "wide",
+        "class": "stacked" if stacked else kind,
         "role": "img",
         "aria-labelledby": f"{name}-title",
         "aria-describedby": f"{name}-desc",
@@ -61,9 +67,26 @@ def inline_svg(figure: Figure, name: str, title: str, alternative: str) -> str:
     return ET.tostring(root, encoding="unicode", short_empty_elements=True)
 
 
-def picture(figure: Figure, name: str, title: str, alternative: str) -> Picture:
-    """Draw a figure for a page; the arguments are those of :func:`inline_svg`."""
-    return Picture(name, title, alternative, inline_svg(figure, name, title, alternative))
+def picture(make: Callable[[], Figure], name: str, title: str, alternative: str) -> Picture:
+    """Draw a figure for a page, once more with its panels stacked if it is wide.
+
+    Parameters
+    ----------
+    make : callable
+        Makes the figure.
+    name, title, alternative : str
+        Those of :func:`inline_svg`.
+    """
+    figure = make()
+    # Asked for before it is drawn: figures of one column fit onto any screen.
+    wide = 72.0 * figure.get_figwidth() >= _NARROW_PT
+    drawn = inline_svg(figure, name, title, alternative)
+    if wide:
+        with style.stacked():
+            figure = make()
+            style.label_stacked(figure)
+        drawn += inline_svg(figure, f"{name}-stacked", title, alternative, stacked=True)
+    return Picture(name, title, alternative, drawn)
 
 
 def _localise(element: ET.Element, prefix: str) -> None:

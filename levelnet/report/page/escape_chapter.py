@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import dataclasses
 import math
+from functools import partial
 
 import numpy as np
 
@@ -34,10 +35,13 @@ from .wording import (
     observable_label,
     one_line,
     origin_section,
+    sentence,
     signed_percent,
+    study_headline,
     trust_section,
 )
 
+_OPEN = "none of the variants is shown to be as exact as was asked"
 _WHAT = {
     ("H I", False): "Treatments of the Lyman lines against the field resolved in frequency",
     ("H I", True): "Treatments of the Lyman lines against the field resolved in frequency, and of "
@@ -68,13 +72,16 @@ def escape_chapter(study: EscapeStudy, origin: Origin, prefix: str) -> Chapter:
         ("error of x_e allowed", f"{found.within:g} at {found.low:g} <= z <= {found.high:g}"),
     )
     more = () if inner is None else _answers(inner)
+    answered = all(_answered(one) for one in (study, inner) if one is not None)
+    ok, outcome, word = study_headline(study.outcome, "" if answered else _OPEN)
     return Chapter(
         name=prefix,
         title=one_line(study.setup.title),
         what=_WHAT[study.species, inner is not None],
         file=origin.name,
-        ok=study.outcome.ok,
-        outcome=study.outcome.value,
+        ok=ok,
+        outcome=outcome,
+        word=word,
         answers=(*_answers(study), *(f"Lines of He I: {text}" for text in more)),
         sections=(
             asked_section(prefix, study.setup, asked),
@@ -85,11 +92,16 @@ def escape_chapter(study: EscapeStudy, origin: Origin, prefix: str) -> Chapter:
     )
 
 
+def _answered(study: EscapeStudy) -> bool:
+    found, met = escape_answer(study)
+    return found.enough is not None and (met is None or met.enough is not None)
+
+
 def _answers(study: EscapeStudy) -> tuple[str, ...]:
     """What is enough; how far each treatment is off stands in the tables."""
     found, met = escape_answer(study)
     said = [verdict_texts(study, found)[-1], *(() if met is None else (demands_text(met),))]
-    return tuple(f"{text[0].upper()}{text[1:]}." for text in said)
+    return tuple(sentence(text) for text in said)
 
 
 def _sections(study: EscapeStudy, prefix: str, heading: str = "") -> tuple[Section, ...]:
@@ -175,34 +187,34 @@ def _shares(study: EscapeStudy) -> Table:
 def _pictures(study: EscapeStudy, found: EscapeVerdict, prefix: str) -> tuple[Picture, ...]:
     pictures = [
         picture(
-            treatment_figure(study),
+            partial(treatment_figure, study),
             f"{prefix}-treatments",
             "Treatments without a field against the reference",
-            "Relative difference of x_e in per cent against redshift, all treatments (left) and "
-            f"those that are close (right). The largest: {_worst(study, found)}.",
+            "Relative difference of x_e in per cent against redshift, all treatments (a) and "
+            f"those that are close (b). The largest: {_worst(study, found)}.",
         ),
         picture(
-            switch_figure(study),
+            partial(switch_figure, study),
             f"{prefix}-switches",
             "What each switch of the field does",
             "Change of x_e in per cent against redshift, each switch added first, last and in "
             f"order. Added last, at the largest: {_largest_last(study)}.",
         ),
         picture(
-            escape_channel_figure(study),
+            partial(escape_channel_figure, study),
             f"{prefix}-channels",
             "How atoms reach the ground state in the reference",
-            f"Shares of the channels at each redshift (left) and since the start (right). "
+            f"Shares of the channels at each redshift (a) and since the start (b). "
             f"{most_through(study.channels)}",
         ),
     ]
     if study.field is not None:
-        title = "The field of the reference"
+        title, make = "The field of the reference", partial(escape_spectrum_figure, study)
         said = (
             "Occupation number over that of the blackbody around Lyman-alpha at a few redshifts. "
             f"{largest_distortion(study.field)}"
         )
-        pictures.append(picture(escape_spectrum_figure(study), f"{prefix}-spectrum", title, said))
+        pictures.append(picture(make, f"{prefix}-spectrum", title, said))
     return tuple(pictures)
 
 

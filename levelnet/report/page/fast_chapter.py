@@ -2,10 +2,13 @@
 
 from __future__ import annotations
 
+from functools import partial
+
 from ...distilled.fast import FastHistory
 from ...history.samples import sample_rows
 from ...history.setup import Setup
 from ..plots import history_figure
+from ..spectrum import field_figure, marked_levels
 from .content import Block, Chapter, Facts, Origin, Picture, Section, Table
 from .drawing import picture
 from .wording import (
@@ -14,6 +17,7 @@ from .wording import (
     observable_label,
     one_line,
     origin_section,
+    spectrum_said,
     trust_section,
 )
 
@@ -54,7 +58,7 @@ def fast_chapter(history: FastHistory, setup: Setup, origin: Origin, prefix: str
         sections=(
             asked_section(prefix, setup),
             Section(f"{prefix}-found", "What came out", _found(history)),
-            Section(f"{prefix}-figures", "Figures", (_picture(history, prefix),)),
+            Section(f"{prefix}-figures", "Figures", _pictures(history, setup, prefix)),
             trust_section(prefix, (_steps(history),), notes),
             origin_section(prefix, origin),
         ),
@@ -99,13 +103,17 @@ def _steps(history: FastHistory) -> Facts:
     return Facts(tuple(rows))
 
 
-def _picture(history: FastHistory, prefix: str) -> Picture:
+def _pictures(history: FastHistory, setup: Setup, prefix: str) -> tuple[Picture, ...]:
     z, x_e = history.redshift, history.free_electron_fraction
     said = (
-        f"Left: free electrons per hydrogen nucleus fall from {x_e[0]:.4g} at z = {z[0]:g} to "
-        f"{x_e[-1]:.3g} at z = {z[-1]:g}, on a logarithmic axis. Right: matter and radiation "
+        f"(a) Free electrons per hydrogen nucleus fall from {x_e[0]:.4g} at z = {z[0]:g} to "
+        f"{x_e[-1]:.3g} at z = {z[-1]:g}, on a logarithmic axis. (b) Matter and radiation "
         f"temperature against 1 + z; at z = {z[-1]:g} matter is at "
         f"{history.matter_temperature_k[-1]:.4g} K."
     )
     title = "Ionization and temperatures"
-    return picture(history_figure(history), f"{prefix}-history", title, said)
+    pictures = [picture(partial(history_figure, history), f"{prefix}-history", title, said)]
+    if history.field is not None:
+        make = partial(field_figure, history.field, marked_levels(setup))
+        pictures.append(picture(make, f"{prefix}-spectrum", *spectrum_said(history.field)))
+    return tuple(pictures)

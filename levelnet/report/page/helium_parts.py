@@ -6,13 +6,14 @@ import math
 
 import numpy as np
 
+from ...arrays import FloatArray
 from ...distilled.table import EffectiveTable
 from ...history.result import History
 from ...history.samples import helium_rows
 from ...studies.helium_groups import helium_shares, top_helium_transitions, top_terms
 from ...studies.weighing import Weighing
 from .content import Table
-from .wording import number, short_name
+from .wording import SPOKEN, largest_said, number, short_name
 
 _LINES = 2  # whose figures are listed; the file holds those of all
 _FIGURES = (
@@ -34,45 +35,8 @@ def half_neutral(history: History) -> float:
     return float(np.interp(0.5, history.neutral_helium_fraction, history.redshift, **ends))
 
 
-def helium_said(history: History) -> dict[str, tuple[str, str]]:
-    """Title and text alternative of each figure that is about helium."""
-    z, twice = history.redshift, history.doubly_ionized_helium_fraction
-    neutral, once = history.neutral_helium_fraction, history.singly_ionized_helium_fraction
-    half = number(half_neutral(history), ".0f")
-    return {
-        "helium": (
-            "Ionization of helium",
-            f"Fractions of the helium nuclei against redshift: at z = {z[0]:g} {twice[0]:.3g} are "
-            f"He III, {once[0]:.3g} He II; at z = {z[-1]:g} {neutral[-1]:.4g} are He I. Half of "
-            f"it is neutral at z = {half}.",
-        ),
-        "helium-departures": (
-            "Departure coefficients of He I",
-            "Natural logarithm of the departure coefficients of singlet and triplet S, P and D "
-            "terms against n, a panel for each of a few redshifts.",
-        ),
-        "helium-lines": (
-            "Lines of He I to its ground state",
-            "Share of the net flow, escape probability, absorption by hydrogen and what the "
-            f"treatment leaves out, against redshift. {_strongest_text(history)}",
-        ),
-    }
-
-
-def _strongest_text(history: History) -> str:
-    rows, figures = helium_rows(history.redshift), history.helium
-    if figures is None or not rows:
-        return ""
-    lines = figures.lines
-    best = _strongest(lines.share[rows])[0]
-    row = rows[int(np.argmax(np.abs(lines.share[rows, best])))]
-    return (
-        f"The strongest is {lines.names[best]}, with {100.0 * lines.share[row, best]:.3g} % at "
-        f"z = {history.redshift[row]:.0f}."
-    )
-
-
-def _strongest(share: np.ndarray) -> list[int]:
+def strongest_lines(share: FloatArray) -> list[int]:
+    """Lines by their largest share at some outputs, shape (n_rows, n_lines), largest first."""
     order: list[int] = np.argsort(-np.abs(share).max(axis=0), kind="stable").tolist()
     return order
 
@@ -90,12 +54,15 @@ def helium_line_tables(history: History) -> tuple[Table, ...]:
             tuple(
                 (
                     f"{history.redshift[k]:.2f}",
-                    *(f"{getattr(lines, name)[k, line]:{form}}" for name, _, form in _FIGURES),
+                    *(
+                        number(getattr(lines, name)[k, line], form, absent="not known")
+                        for name, _, form in _FIGURES
+                    ),
                 )
                 for k in rows
             ),
         )
-        for line in _strongest(lines.share[rows])[:_LINES]
+        for line in strongest_lines(lines.share[rows])[:_LINES]
     )
 
 
@@ -127,29 +94,50 @@ def weighing_tables(weighing: Weighing) -> tuple[Table, ...]:
 
     Nothing where helium is inert.
     """
-    helium, ion, targets = weighing.helium, weighing.helium_ion, weighing.targets
+    helium, targets = weighing.helium, weighing.targets
     if helium is None:
         return ()
     places = [weighing.index(one) for one in targets]
     heads = [short_name(one) for one in targets]
-    columns = []
-    for at in places:
-        pairs = zip(helium.lines, helium.strength[at].tolist(), strict=True)
-        column = {f"A of {name}": one for name, one in pairs}
-        escape = zip(helium.lines, helium.escape[at].tolist(), strict=True)
-        column |= {f"escape of {name}": one for name, one in escape}
-        column["two-photon decay of 2 1S"] = float(helium.two_photon[at])
-        column["absorption by the continuum of H I"] = float(helium.absorption[at])
-        if ion is not None:
-            own = ion.processes(at)
-            column |= {f"He II {name.replace('_', '-')}": one for name, one in own.items()}
-        columns.append(column)
+    columns = [_rates(weighing, at) for at in places]
     groups = [helium_shares(helium, at) for at in places]
     return (
         _side_by_side("By rates of helium", "rate", heads, columns),
         _side_by_side("By groups of rates of He I", "group", heads, groups),
         *(_ranked(weighing, one) for one in targets),
     )
+
+
+def _rates(weighing: Weighing, at: int) -> dict[str, float]:
+    """Derivatives of one target by lines to the ground state, their escape, and the rest."""
+    helium, ion = weighing.helium, weighing.helium_ion
+    assert helium is not None
+    pairs = zip(helium.lines, helium.strength[at].tolist(), strict=True)
+    rates = {f"A of {name}": one for name, one in pairs}
+    escape = zip(helium.lines, helium.escape[at].tolist(), strict=True)
+    rates |= {f"escape of {name}": one for name, one in escape}
+    rates["two-photon decay of 2 1S"] = float(helium.two_photon[at])
+    rates["absorption by the continuum of H I"] = float(helium.absorption[at])
+    if ion is not None:
+        own = ion.processes(at)
+        rates |= {f"He II {name.replace('_', '-')}": one for name, one in own.items()}
+    return rates
+
+
+def helium_ranking_said(weighing: Weighing, target: str) -> str:
+    """The largest of each panel of the figure of helium, in numbers."""
+    helium, at = weighing.helium, weighing.index(target)
+    assert helium is not None
+    parts = [
+        largest_said("rates", _rates(weighing, at).items()),
+        largest_said("groups", helium_shares(helium, at).items()),
+    ]
+    for what, ranked in (
+        ("transitions", top_helium_transitions(helium, at, SPOKEN)),
+        ("cross sections", top_terms(helium, at, SPOKEN)),
+    ):
+        parts.append(largest_said(what, ((one.name, one.weight) for one in ranked)))
+    return " ".join(one for one in parts if one)
 
 
 def _side_by_side(

@@ -7,19 +7,19 @@ import math
 import numpy as np
 
 from ...constants import SECONDS_PER_YEAR
-from ...history.result import History, RadiationField
+from ...history.result import History
 from ...history.samples import sample_rows
-from ..figures import make_figures
+from ..figures import figure_makers
 from .content import Block, Chapter, Facts, Origin, Picture, Section, Table
 from .drawing import picture
-from .helium_parts import half_neutral, helium_line_tables, helium_said
+from .helium_parts import half_neutral, helium_line_tables
+from .history_said import history_said
 from .wording import (
     asked_section,
-    largest_distortion,
-    most_through,
     number,
     one_line,
     origin_section,
+    sentence,
     trust_section,
 )
 
@@ -78,8 +78,7 @@ def _answer(history: History) -> str:
         if math.isfinite(value)
     ]
     end = f"x_e = {history.free_electron_fraction[-1]:.6g} at z = {history.redshift[-1]:g}"
-    text = "; ".join([*parts, end])
-    return text[0].upper() + text[1:] + "."
+    return sentence("; ".join([*parts, end]))
 
 
 def _found(history: History) -> tuple[Block, ...]:
@@ -132,66 +131,9 @@ def _channels(history: History) -> Table:
 
 
 def _pictures(history: History, prefix: str) -> tuple[Picture, ...]:
-    said = _said(history)
+    said = history_said(history)
     return tuple(
-        picture(figure, f"{prefix}-{key}", *said[key])
-        for key, figure in make_figures(history).items()
-    )
-
-
-def _said(history: History) -> dict[str, tuple[str, str]]:
-    """Title and text alternative of each figure."""
-    z, x_e, marks = history.redshift, history.free_electron_fraction, history.milestones
-    matter = history.matter_temperature_k
-    species = history.species[0]
-    row = int(np.argmin(np.abs(z - _middle(marks.visibility_peak_redshift, z))))
-    excited = species.log_departure[row, species.levels.n > 1]
-    spectra = "" if history.field is None else _spectrum(history.field)
-    return {
-        "history": (
-            "Ionization and temperatures",
-            f"Left: free electrons per hydrogen nucleus fall from {x_e[0]:.4g} at z = {z[0]:g} to "
-            f"{x_e[-1]:.3g} at z = {z[-1]:g}, and neutral hydrogen rises to "
-            f"{history.neutral_hydrogen_fraction[-1]:.4g}, on a logarithmic axis. Right: matter "
-            f"and radiation temperature against 1 + z; at z = {z[-1]:g} matter is at "
-            f"{matter[-1]:.4g} K and radiation at {history.radiation_temperature_k[-1]:.4g} K.",
-        ),
-        "departure-map": (
-            "Departure coefficients over n and l",
-            f"Natural logarithm of the departure coefficient of every excited level at "
-            f"z = {z[row]:.0f}, as a map: from {excited.min():.3g} to {excited.max():.3g}; 0 is "
-            "Saha-Boltzmann equilibrium at the matter temperature.",
-        ),
-        "departure-curves": (
-            "Departure coefficients against n",
-            "The same logarithm against n for l = 0, 1 and 2 and for the mean over l, a panel for "
-            "each of a few redshifts.",
-        ),
-        "channels": (
-            "How atoms reach the ground state",
-            "Shares of the channels at each redshift (left) and since the start (right). "
-            f"{most_through(history.channels)}",
-        ),
-        "visibility": (
-            "Visibility",
-            f"The visibility function g against redshift; it peaks at "
-            f"z = {number(marks.visibility_peak_redshift, '.1f')} with a full width at half "
-            f"maximum of {number(marks.visibility_width, '.1f')}.",
-        ),
-        "spectrum": ("Spectrum of the radiation field", spectra),
-        **({} if history.helium is None else helium_said(history)),
-    }
-
-
-def _middle(peak: float, redshift: np.ndarray) -> float:
-    return peak if math.isfinite(peak) else float(redshift[len(redshift) // 2])
-
-
-def _spectrum(field: RadiationField) -> str:
-    return (
-        "Occupation number of photons over that of the blackbody, against photon energy from half "
-        "of Lyman-alpha to the Lyman limit, and close to Lyman-alpha, at a few redshifts. "
-        f"{largest_distortion(field)}"
+        picture(make, f"{prefix}-{key}", *said[key]) for key, make in figure_makers(history).items()
     )
 
 

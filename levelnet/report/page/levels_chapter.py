@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from functools import partial
 
 import numpy as np
 
@@ -22,11 +23,14 @@ from .wording import (
     observable_label,
     one_line,
     origin_section,
+    sentence,
     signed_percent,
+    study_headline,
     trust_section,
     unit_text,
 )
 
+_OPEN = "these rungs do not tell how many levels are needed"
 _WHAT = {
     "hydrogen": "How many levels matter: a ladder of n_max",
     "helium": "How many levels of helium matter: a ladder of its n_max",
@@ -51,14 +55,17 @@ def levels_chapter(study: LevelStudy, origin: Origin, prefix: str) -> Chapter:
         (f"rungs, {n_max_name(study.atom)}", rungs),
         ("error of x_e allowed", f"{found.within:g} at {found.low:g} < z < {found.high:g}"),
     )
+    answered = found.n_max is not None and (met is None or met.n_max is not None)
+    ok, outcome, word = study_headline(study.outcome, "" if answered else _OPEN)
     return Chapter(
         name=prefix,
         title=one_line(study.setup.title),
         what=_WHAT[study.atom],
         file=origin.name,
-        ok=study.outcome.ok,
-        outcome=study.outcome.value,
-        answers=tuple(f"{text[0].upper()}{text[1:]}." for text in _answers(study, found, met)),
+        ok=ok,
+        outcome=outcome,
+        word=word,
+        answers=tuple(sentence(text) for text in _answers(study, found, met)),
         sections=(
             asked_section(prefix, study.setup, asked),
             Section(f"{prefix}-found", "What came out", _found(study, found, met)),
@@ -166,11 +173,11 @@ def _pictures(study: LevelStudy, prefix: str) -> tuple[Picture, ...]:
     n_max, name = rungs.n_max.tolist(), n_max_name(study.atom)
     pictures = [
         picture(
-            level_figure(study),
+            partial(level_figure, study),
             f"{prefix}-levels",
             "Truncation error",
-            f"Relative error of x_e against {name} (left), close to the limit of all levels "
-            f"(middle) and of each rung against redshift (right). At z = {study.redshift[late]:.0f}"
+            f"Relative error of x_e against {name} (a), close to the limit of all levels "
+            f"(b) and of each rung against redshift (c). At z = {study.redshift[late]:.0f}"
             f" it falls from {signed_percent(errors[0, late])} at {name} = {n_max[0]} to "
             f"{signed_percent(errors[-1, late])} at {name} = {n_max[-1]}.",
         )
@@ -180,7 +187,7 @@ def _pictures(study: LevelStudy, prefix: str) -> tuple[Picture, ...]:
         miss = float(np.nanmax(checked.largest_miss_over_bar))
         pictures.append(
             picture(
-                check_figure(study),
+                partial(check_figure, study),
                 f"{prefix}-check",
                 "The longest rungs as foreseen from the shorter ones",
                 "Misses over error bars, and the exponent of the approach, against redshift. The "
@@ -190,7 +197,7 @@ def _pictures(study: LevelStudy, prefix: str) -> tuple[Picture, ...]:
     if study.resolved is not None:
         pictures.append(
             picture(
-                resolve_figure(study),
+                partial(resolve_figure, study),
                 f"{prefix}-resolve",
                 "Whole shells in place of levels",
                 "Relative change of x_e against redshift where the shells above some n are "

@@ -5,13 +5,14 @@ from __future__ import annotations
 import math
 from collections import Counter
 from collections.abc import Sequence
+from functools import partial
 from typing import Any
 
 import numpy as np
 
 from ...errors import Outcome, cut_short
 from ...studies.sweep_record import Sweep
-from ..sweep import case_curve, drawn_cases, sweep_figure
+from ..sweep import FEW, case_curve, drawn_cases, short_keys, sweep_figure
 from .content import Block, Chapter, Facts, Listing, Origin, Picture, Section, Table
 from .drawing import picture
 from .wording import one_line, origin_section, short_name, trust_section, unit_text
@@ -78,9 +79,14 @@ def _range(column: Sequence[Any]) -> str:
     # NaN stands where a case leaves the key out.
     given = [one for one in column if not isinstance(one, float) or math.isfinite(one)]
     different = list(dict.fromkeys(given))
+    if not different:
+        return "left out by every case"
     if all(isinstance(one, str) for one in different):
         shown = ", ".join(different[:8])
-        return f"{len(different)} values: {shown}" + (", ..." if len(different) > 8 else "")
+        count = "1 value" if len(different) == 1 else f"{len(different)} values"
+        return f"{count}: {shown}" + (", ..." if len(different) > 8 else "")
+    if len(different) == 1:
+        return f"1 value: {different[0]:.6g}"
     return f"{len(different)} values, {min(different):.6g} to {max(different):.6g}"
 
 
@@ -97,7 +103,9 @@ def _ranges(sweep: Sweep) -> Table:
 
 def _cases(sweep: Sweep) -> Table:
     count = len(sweep)
-    shown = sorted({round(k * (count - 1) / max(1, _SHOWN - 1)) for k in range(_SHOWN)})
+    spread = {round(k * (count - 1) / max(1, _SHOWN - 1)) for k in range(_SHOWN)}
+    drawn = drawn_cases(sweep)
+    shown = sorted(spread.union(drawn if len(drawn) <= FEW else ()))  # the figure names those
     names = [name for name in _OBSERVABLES if name in sweep.observable_names]
     rows = []
     for k in shown:
@@ -106,7 +114,13 @@ def _cases(sweep: Sweep) -> Table:
         last = f"{x_e[-1]:.6e}" if len(x_e) else "none"
         seen = [f"{sweep[name][k]:.7g}" if math.isfinite(sweep[name][k]) else "" for name in names]
         rows.append((str(k), *swept, _ended(sweep.outcome[k]), last, *seen))
-    head = ("case", *sweep.swept, "outcome", "x_e at its end", *(short_name(one) for one in names))
+    head = (
+        "case",
+        *short_keys(sweep.swept),
+        "outcome",
+        "x_e at its end",
+        *(short_name(one) for one in names),
+    )
     caption = (
         "The cases" if len(shown) == count else f"{len(shown)} of {count} cases, spread evenly"
     )
@@ -124,12 +138,19 @@ def _pictures(sweep: Sweep, prefix: str) -> tuple[Picture, ...]:
     said = "No case gave a history, so that the figure is empty."
     if drawn:
         ends = [float(case_curve(sweep, k)[1][-1]) for k in drawn]
-        said = (
-            f"x_e of {len(drawn)} cases against redshift, on a logarithmic axis (left), and its "
-            f"difference in per cent from case {drawn[0]} (right). At the last output of each it "
-            f"lies between {min(ends):.4g} and {max(ends):.4g}."
+        named = (
+            "Each is named by its number in the table above."
+            if len(drawn) <= FEW
+            else "The colour runs from dark to light through the cases in their order."
         )
-    return (picture(sweep_figure(sweep), f"{prefix}-sweep", "Histories of all cases", said),)
+        said = (
+            f"x_e of {len(drawn)} cases against redshift, on a logarithmic axis (a), and its "
+            f"difference in per cent from case {drawn[0]} (b). At the last output of each it "
+            f"lies between {min(ends):.4g} and {max(ends):.4g}. {named}"
+        )
+    return (
+        picture(partial(sweep_figure, sweep), f"{prefix}-sweep", "Histories of all cases", said),
+    )
 
 
 def _notes(sweep: Sweep) -> tuple[str, ...]:

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from functools import partial
 
 import numpy as np
 
@@ -117,7 +118,7 @@ def _pictures(table: EffectiveTable, prefix: str) -> tuple[Picture, ...]:
     low, high = table.radiation_range_k
     pictures = [
         picture(
-            rate_figure(table),
+            partial(rate_figure, table),
             f"{prefix}-rates",
             "Effective rates",
             "Effective recombination and exchange rates against the radiation temperature, "
@@ -129,7 +130,7 @@ def _pictures(table: EffectiveTable, prefix: str) -> tuple[Picture, ...]:
     if proof is not None:
         pictures.append(
             picture(
-                certificate_figure(proof, table.tolerance),
+                partial(certificate_figure, proof, table.tolerance),
                 f"{prefix}-certificate",
                 "Measured errors",
                 f"Errors of the rates at {proof.n_points} random points, and of x_e(z) against the "

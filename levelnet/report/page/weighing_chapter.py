@@ -5,12 +5,14 @@ from __future__ import annotations
 from ...studies.budget_record import ErrorBudget
 from ...studies.groups import by_level, top_transitions
 from ...studies.weighing import Weighing
-from ..weights import file_names, make_weighing_figures
+from ..weights import PROCESSES, file_names, weighing_makers
 from .content import Block, Chapter, Facts, Origin, Picture, Section, Table
 from .drawing import picture
-from .helium_parts import weighing_tables
+from .helium_parts import helium_ranking_said, weighing_tables
 from .wording import (
+    SPOKEN,
     asked_section,
+    largest_said,
     number,
     one_line,
     origin_section,
@@ -127,19 +129,40 @@ def _pictures(weighing: Weighing, prefix: str) -> tuple[Picture, ...]:
         said[f"ranking-{name}"] = (
             f"Ranking for {target}",
             "Bars of the largest derivatives: processes and parameters, dipole transitions, cross "
-            "sections and, where there is a budget, contributions to the error. The tables above "
-            "have the numbers.",
+            "sections and, where there is a budget, contributions to the error. "
+            f"{_ranking_said(weighing, target)}",
         )
-        said[f"helium-{name}"] = (
-            f"Rates of helium for {target}",
-            "Bars of the largest derivatives by rates of helium: lines to the ground state with "
-            "the continuum and He II, groups of He I, dipole transitions and cross sections of "
-            "terms. The tables above have the numbers.",
-        )
+        if weighing.helium is not None:
+            said[f"helium-{name}"] = (
+                f"Rates of helium for {target}",
+                "Bars of the largest derivatives by rates of helium: lines to the ground state "
+                "with the continuum and He II, groups of He I, dipole transitions and cross "
+                f"sections of terms. {helium_ranking_said(weighing, target)}",
+            )
     return tuple(
-        picture(figure, f"{prefix}-{key.replace('.', '-').replace('_', '-')}", *said[key])
-        for key, figure in make_weighing_figures(weighing).items()
+        picture(make, f"{prefix}-{key.replace('.', '-').replace('_', '-')}", *said[key])
+        for key, make in weighing_makers(weighing).items()
     )
+
+
+def _ranking_said(weighing: Weighing, target: str) -> str:
+    """The largest of each panel in numbers."""
+    levels = by_level(weighing, target)
+    sections = zip(levels.names, levels.bound_free.tolist(), strict=True)
+    lines = top_transitions(weighing, target, SPOKEN)
+    at, own = weighing.index(target), weighing.processes(target)
+    parameters = zip(weighing.parameters, weighing.parameter[at].tolist(), strict=True)
+    parts = [
+        largest_said("processes", ((text, own[name]) for name, text in PROCESSES.items())),
+        largest_said("parameters", parameters),
+        largest_said("transitions", ((one.name, one.weight) for one in lines)),
+        largest_said("cross sections", sections),
+    ]
+    budget = weighing.budget
+    if budget is not None and target in budget.targets:
+        ranked = ((one.group, one.contribution) for one in budget.ranked(target))
+        parts.append(largest_said("contributions", ranked))
+    return " ".join(one for one in parts if one)
 
 
 def _band_said(budget: ErrorBudget | None) -> tuple[str, str]:

@@ -5,10 +5,12 @@ from __future__ import annotations
 import math
 import re
 import textwrap
+from collections.abc import Iterable
 
 import numpy as np
 
 from ...background.parameters import helium_mass_fraction
+from ...errors import Outcome
 from ...history.result import Channels, RadiationField
 from ...history.setup import Setup
 from ...quantities import OBSERVABLES
@@ -18,6 +20,8 @@ from .content import UNKNOWN, Block, Facts, Listing, Origin, Section, Statements
 _LIBRARIES = ("numpy", "scipy", "numba", "h5py")
 _NUMBERS = re.compile(r"\[\n((?:    [-+.0-9e]+,\n)+)\]")  # an array, a number a line
 _WIDTH = 88
+SPOKEN = 3
+"""How many of a ranking a text alternative tells."""
 _LONGEST_SETUP = 8000  # characters: an expansion table may stand inside
 
 
@@ -26,10 +30,34 @@ def one_line(text: str) -> str:
     return " ".join(text.split())
 
 
-def number(value: float, form: str = ".6g", unit: str = "") -> str:
-    """Format a number; what the outputs do not reach has no value and is said to have none."""
+def sentence(text: str) -> str:
+    """Make a sentence of a text; a symbol such as x_e at its beginning stays what it is."""
+    first = text.split(maxsplit=1)[0]
+    return f"{text if '_' in first else text[0].upper() + text[1:]}."
+
+
+def study_headline(outcome: Outcome, open_question: str) -> tuple[bool | None, str, str]:
+    """How a study ended: whether it may be used, the sentence, and the word before it.
+
+    Parameters
+    ----------
+    outcome : Outcome
+        Of the histories behind it, all together.
+    open_question : str
+        What they do not tell of what was asked; empty where they do.
+    """
+    if not outcome.ok:
+        return False, outcome.value, ""
+    histories = f"every history {outcome.value}"
+    if not open_question:
+        return True, histories, ""
+    return None, f"{histories}, but {open_question}", "Question left open"
+
+
+def number(value: float, form: str = ".6g", unit: str = "", absent: str = "not reached") -> str:
+    """Format a number; NaN has no value: `absent` says why, the outputs not reaching it if not."""
     if not math.isfinite(value):
-        return "not reached"
+        return absent
     return f"{value:{form}} {unit}".rstrip()
 
 
@@ -143,11 +171,29 @@ def limit_text(one: Finding) -> str:
     return f"{short_name(one.name)}, at most {one.limit:g} {one.unit}"
 
 
+def largest_said(what: str, pairs: Iterable[tuple[str, float]]) -> str:
+    """Say the largest of some numbers with their names; nothing where all are 0."""
+    ranked = sorted((one for one in pairs if one[1] != 0.0), key=lambda one: -abs(one[1]))
+    if not ranked:
+        return ""
+    shown = ", ".join(f"{name} {value:+.3g}" for name, value in ranked[:SPOKEN])
+    return f"Largest {what}: {shown}."
+
+
 def most_through(channels: Channels) -> str:
     """Say which channel most atoms took."""
     first = int(np.argmax(channels.cumulative_share[-1]))
     share = 100.0 * channels.cumulative_share[-1, first]
     return f"Most atoms, {share:.2f} %, went through {channels.names[first]}."
+
+
+def spectrum_said(field: RadiationField) -> tuple[str, str]:
+    """Title and text alternative of the figure of a field."""
+    return "Spectrum of the radiation field", (
+        "Occupation number of photons over that of the blackbody, against photon energy from half "
+        "of Lyman-alpha to the Lyman limit, and close to Lyman-alpha, at a few redshifts. "
+        f"{largest_distortion(field)}"
+    )
 
 
 def largest_distortion(field: RadiationField) -> str:
