@@ -1,4 +1,4 @@
-"""Exceptions, warnings and the outcome of a calculation."""
+"""Exceptions, warnings, the outcome of a calculation, and bad values within complaints."""
 
 from enum import Enum
 
@@ -31,6 +31,19 @@ class Outcome(Enum):
     def ok(self) -> bool:
         """True where the result may be used as it stands."""
         return self is Outcome.CONVERGED
+
+
+def cut_short(text: str, longest: int = 60) -> str:
+    """Cut a bad value so that a complaint that repeats it stays one line that can be read.
+
+    Parameters
+    ----------
+    text : str
+        The value as it was given.
+    longest : int
+        Characters that are repeated; what is longer ends in three points.
+    """
+    return text if len(text) <= longest else f"{text[:longest]}..."
 
 
 class LevelnetError(Exception):

@@ -16,11 +16,10 @@ import numpy as np
 from pydantic import BeforeValidator, ConfigDict, TypeAdapter, ValidationError, ValidationInfo
 from pydantic.dataclasses import dataclass as pydantic_dataclass
 
-from .errors import InputError
+from .errors import InputError, cut_short
 
 T = TypeVar("T")
 
-_LONGEST = 60  # characters of a bad value that a complaint repeats
 _CONFIG = ConfigDict(extra="forbid", strict=True, allow_inf_nan=False, arbitrary_types_allowed=True)
 
 
@@ -112,6 +111,4 @@ def _complaint(item: Any, record: Any) -> str:
     message = str(item["msg"]).removeprefix("Value error, ")
     if isinstance(item["input"], dict):
         return f"{path}: {message}"
-    value = repr(item["input"])
-    value = value if len(value) <= _LONGEST else f"{value[:_LONGEST]}..."
-    return f"{path} = {value}: {message[0].lower()}{message[1:]}"
+    return f"{path} = {cut_short(repr(item['input']))}: {message[0].lower()}{message[1:]}"

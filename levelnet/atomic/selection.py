@@ -16,7 +16,7 @@ from typing import NamedTuple
 import numpy as np
 
 from ..arrays import BoolArray, IntArray
-from ..errors import InputError
+from ..errors import InputError, cut_short
 from .levels import ORBITAL_LETTERS, LevelSet
 from .term_patterns import ENDLESS as _ENDLESS
 from .term_patterns import (
@@ -39,7 +39,6 @@ _PATTERN = re.compile(
 _FORMS = (
     "3d, 3, 3-10, 3-* or *, each with an orbital letter or [l=25] behind it where one l is meant"
 )
-_LONGEST = 40  # characters of a bad pattern that a complaint repeats
 
 
 class AtomSize(NamedTuple):
@@ -212,7 +211,7 @@ def parse_selector(process: str, upper: str, lower: str) -> Selector:
         If it is no selector, or none that could select anything in any atom.
     """
     if process not in PROCESSES:
-        raise InputError(f'process "{_short(process)}": allowed are {", ".join(PROCESSES)}')
+        raise InputError(f'process "{cut_short(process)}": allowed are {", ".join(PROCESSES)}')
     text = " ".join(part for part in (process, upper, lower) if part)
     species, upper, lower = _species_of(upper, lower)
     if species != "H I" and process in {"compton", "absorption"}:
@@ -226,7 +225,7 @@ def _species_of(upper: str, lower: str) -> tuple[str, str, str]:
     ends = [re.fullmatch(r"(?:(He II|He I)(?!\w)\s*)?(.*)", text) for text in (upper, lower)]
     named = [end[1] for end in ends if end is not None]
     if lower and named[1] is not None and named[1] != named[0]:
-        raise InputError(f'lower = "{_short(lower)}": upper is of {named[0] or "H I"}')
+        raise InputError(f'lower = "{cut_short(lower)}": upper is of {named[0] or "H I"}')
     first, second = (end[2] if end is not None else "" for end in ends)
     return named[0] or "H I", first, second
 
@@ -237,14 +236,14 @@ def _parsed(process: str, upper: str, lower: str, text: str, species: str) -> Se
     if process == "bound_bound":
         if re.match(r"1(?!\d)", lower):
             raise InputError(
-                f'lower = "{_short(lower)}": lines to the ground state act through their escape; '
-                "use process escape"
+                f'lower = "{cut_short(lower)}": lines to the ground state act through their '
+                "escape; use process escape"
             )
         return _existing(
             Selector(process, _pattern("upper", upper), _pattern("lower", lower), text)
         )
     if lower:
-        raise InputError(f'lower = "{_short(lower)}": {process} takes none; leave it empty')
+        raise InputError(f'lower = "{cut_short(lower)}": {process} takes none; leave it empty')
     if process == "bound_free":
         return _existing(Selector(process, _pattern("upper", upper), None, text))
     if process == "escape":
@@ -254,7 +253,7 @@ def _parsed(process: str, upper: str, lower: str, text: str, species: str) -> Se
     allowed = {"2s", ""} if process == "two_photon" else {""}
     if upper not in allowed:
         what = "allowed is 2s, or nothing" if process == "two_photon" else "leave it empty"
-        raise InputError(f'upper = "{_short(upper)}": {process} has one rate; {what}')
+        raise InputError(f'upper = "{cut_short(upper)}": {process} has one rate; {what}')
     return Selector(process, None, None, text)
 
 
@@ -351,7 +350,9 @@ def _p_levels(text: str) -> LevelPattern:
 def _pattern(column: str, text: str) -> LevelPattern:
     found = _PATTERN.fullmatch(text)
     if found is None:
-        raise InputError(f'{column} = "{_short(text)}": is no level pattern; allowed are {_FORMS}')
+        raise InputError(
+            f'{column} = "{cut_short(text)}": is no level pattern; allowed are {_FORMS}'
+        )
     low = int(found["low"] or 2)
     high = _ENDLESS if "*" in {found["all"], found["high"]} else int(found["high"] or low)
     letter, number = found["letter"], found["l"]
@@ -363,7 +364,3 @@ def _pattern(column: str, text: str) -> LevelPattern:
     if l is not None and l >= high:
         raise InputError(f'{column} = "{text}": is no level; l = {l} needs n of at least {l + 1}')
     return LevelPattern(low, high, l)
-
-
-def _short(text: str) -> str:
-    return text if len(text) <= _LONGEST else f"{text[:_LONGEST]}..."

@@ -8,7 +8,7 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 from pathlib import Path
 
-from ..errors import InputError
+from ..errors import InputError, cut_short
 from ..texts import read_text
 from .selection import Selector, parse_selector
 
@@ -64,7 +64,9 @@ def _check_header(where: str, found: list[str], columns: Sequence[str]) -> None:
     unknown = [name for name in found if name not in columns]
     if unknown:
         name = unknown[0] if unknown[0].isprintable() else repr(unknown[0])
-        raise InputError(f'{where}: column "{name[:40]}" is unknown; allowed: {",".join(columns)}')
+        raise InputError(
+            f'{where}: column "{cut_short(name)}" is unknown; allowed: {",".join(columns)}'
+        )
     if found != list(columns):
         raise InputError(f"{where}: the header must be {','.join(columns)}")
 
@@ -114,5 +116,6 @@ def number_in(row: SelectorRow, column: str) -> float:
     except ValueError:
         value = float("nan")
     if not abs(value) < float("inf"):
-        raise InputError(f'{row.where}: {column} = "{row.cells[column][:40]}" is no finite number')
+        given = cut_short(row.cells[column])
+        raise InputError(f'{row.where}: {column} = "{given}" is no finite number')
     return value

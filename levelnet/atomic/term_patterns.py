@@ -15,7 +15,7 @@ from typing import NamedTuple
 import numpy as np
 
 from ..arrays import BoolArray, IntArray
-from ..errors import InputError
+from ..errors import InputError, cut_short
 from .levels import ORBITAL_LETTERS
 
 GROUND_TERM = "1 1S"
@@ -30,7 +30,6 @@ _FORMS = (
     "2 3P, 2, 3-10, 3-* or *, each with a multiplicity (1 or 3) and a letter or [l=25] behind a "
     "space where that is meant, as in 3-* 1D"
 )
-_LONGEST = 40
 
 
 class HeliumSize(NamedTuple):
@@ -116,8 +115,9 @@ def parse_term(column: str, text: str) -> TermPattern:
     """Make a pattern of excited terms; `column` is for messages."""
     found = _PATTERN.fullmatch(text)
     if found is None:
-        short = text if len(text) <= _LONGEST else f"{text[:_LONGEST]}..."
-        raise InputError(f'{column} = "He I {short}": is no pattern of terms; allowed are {_FORMS}')
+        raise InputError(
+            f'{column} = "He I {cut_short(text)}": is no pattern of terms; allowed are {_FORMS}'
+        )
     low = int(found["low"] or 2)
     high = ENDLESS if "*" in {found["all"], found["high"]} else int(found["high"] or low)
     letter, number = found["letter"], found["l"]
@@ -186,7 +186,7 @@ def term_patterns(
     """
     if process == "two_photon":
         if upper not in {"2 1S", ""} or lower:
-            raise InputError(f'upper = "He I {upper[:_LONGEST]}": two_photon is of 2 1S alone')
+            raise InputError(f'upper = "He I {cut_short(upper)}": two_photon is of 2 1S alone')
         return None, None
     above = parse_term("upper", upper)
     to_ground = process == "bound_bound" and lower == GROUND_TERM
@@ -200,5 +200,5 @@ def term_patterns(
             raise InputError(f'lower = "He I {lower}": only lines to {GROUND_TERM} tell J apart')
         return above, below
     if lower:
-        raise InputError(f'lower = "{lower[:_LONGEST]}": {process} takes none; leave it empty')
+        raise InputError(f'lower = "{cut_short(lower)}": {process} takes none; leave it empty')
     return above, None

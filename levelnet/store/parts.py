@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Mapping, Sequence
 from typing import Any
 
-from ..errors import FileFormatError, Outcome
+from ..errors import FileFormatError, Outcome, cut_short
 from ..history.setup import Setup, parse_setup
 from . import layout
 from .schema import Content, Group, Layout
@@ -15,7 +15,7 @@ def outcome_of(content: Content) -> Outcome:
     """How the run ended that a file is from; FileFormatError for a name that is not known."""
     outcome = str(content.attributes["outcome"])
     if outcome not in Outcome.__members__:
-        raise FileFormatError(f'outcome "{outcome}" is not known to this levelnet')
+        raise FileFormatError(f'outcome "{cut_short(outcome)}" is not known to this levelnet')
     return Outcome[outcome]
 
 

@@ -7,7 +7,7 @@ from typing import TYPE_CHECKING, Any
 
 from ..atomic.helium_levels import HeliumLevels
 from ..atomic.levels import LevelSet
-from ..errors import FileFormatError, Outcome
+from ..errors import FileFormatError, Outcome, cut_short
 from ..escape.lines import Lines
 from ..history.result import Channels, RadiationField
 from ..history.setup import Setup
@@ -108,7 +108,7 @@ def escape_study_of(content: Content) -> EscapeStudy:
         raise FileFormatError(f"helium reference: must be 0 to {len(names) - 1}")
     name = names[at]
     if name not in Outcome.__members__:
-        raise FileFormatError(f'outcome "{name}" is not known to this levelnet')
+        raise FileFormatError(f'outcome "{cut_short(name)}" is not known to this levelnet')
     inner = _escape_study(helium | shared, setup, Outcome[name])
     return replace(found, helium=replace(inner, setup=_reference_setup(inner)))
 

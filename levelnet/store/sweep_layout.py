@@ -14,7 +14,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from ..errors import FileFormatError
+from ..errors import FileFormatError, cut_short
 from . import layout
 from .digest import content_digest
 from .provenance import provenance
@@ -99,7 +99,7 @@ def _of_attributes(attributes: Mapping[str, Any]) -> Layout:
         kind, _, key = line.partition(" ")
         known = next((one for one in _KINDS if one == kind), None)
         if known is None or not _KEY.fullmatch(key):
-            raise ValueError(f"attribute swept: {line[:40]!r} names no key")
+            raise ValueError(f"attribute swept: {cut_short(line)!r} names no key")
         swept.append((known, key))
     if attributes["outputs"] not in {_SHARED, _APART}:
         raise ValueError("attribute outputs: neither shared nor by case")

@@ -6,7 +6,7 @@ import dataclasses
 from collections.abc import Callable, Iterable
 from typing import Literal, NamedTuple
 
-from ..errors import InputError
+from ..errors import InputError, cut_short
 from ..escape.lines import Lines, Transfer
 from ..history.setup import Setup
 
@@ -236,7 +236,7 @@ def checked_order(
     known, text = ", ".join(every), ", ".join(given)
     unknown = [name for name in given if name not in every]
     if unknown:
-        raise InputError(f'order: "{unknown[0]}" is no switch; they are {known}')
+        raise InputError(f'order: "{cut_short(unknown[0])}" is no switch; they are {known}')
     if sorted(given) != sorted(every):
         raise InputError(f"order = {text}: each switch once is needed: {known}")
     for name, needed in needs.items():

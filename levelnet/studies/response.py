@@ -25,7 +25,7 @@ import numpy as np
 from pydantic import Field
 
 from ..arrays import FloatArray
-from ..errors import InputError
+from ..errors import InputError, cut_short
 from ..records import TUPLES, checked_record
 from ..texts import read_bytes
 
@@ -128,9 +128,9 @@ def _check_names(names: tuple[str, ...]) -> None:
         raise ValueError(f"{len(names)} observables, allowed are 1 to {MAX_OBSERVABLES}")
     for name in names:
         if not re.fullmatch(r"\w+", name, re.ASCII):
-            raise ValueError(f'the name "{name}" may hold letters, digits and _ only')
+            raise ValueError(f'the name "{cut_short(name)}" may hold letters, digits and _ only')
         if names.count(name) > 1:
-            raise ValueError(f'"{name}" is named twice')
+            raise ValueError(f'"{cut_short(name)}" is named twice')
 
 
 def _check_redshift(redshift: Row) -> None:

@@ -11,7 +11,7 @@ from collections.abc import Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any
 
-from ..errors import InputError
+from ..errors import InputError, cut_short
 from ..history.setup import Setup
 from ..records import Complaints, attempt
 
@@ -60,7 +60,7 @@ def case_label(k: int, values: Iterable[tuple[str, Any]]) -> str:
 
 def _short(value: object) -> str:
     text = f"{value:.6g}" if isinstance(value, float) else str(value)
-    return text if len(text) <= _LONGEST else f"{text[:_LONGEST]}..."
+    return cut_short(text, _LONGEST)
 
 
 def vary(

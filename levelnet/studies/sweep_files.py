@@ -10,7 +10,7 @@ from collections.abc import Mapping
 from pathlib import Path
 from typing import Any
 
-from ..errors import InputError
+from ..errors import InputError, cut_short
 from ..texts import read_text
 from .sweep_cases import MOST_CASES, Cases, flat, make_cases, varied
 
@@ -108,7 +108,9 @@ def _values(given: Any) -> list[Any]:
     if not isinstance(count, int) or isinstance(count, bool) or not 2 <= count <= MOST_CASES:
         raise ValueError(f"count: a whole number from 2 to {MOST_CASES} is needed")
     if spacing not in _SPACINGS:
-        raise ValueError(f'spacing = "{spacing}": allowed are {", ".join(_SPACINGS)}')
+        raise ValueError(
+            f'spacing = "{cut_short(str(spacing))}": allowed are {", ".join(_SPACINGS)}'
+        )
     if spacing == "logarithmic" and not 0.0 < low * high < math.inf:
         raise ValueError("from and to: logarithmic spacing needs both above 0, or both below")
     return _between(low, high, count, spacing)

@@ -7,7 +7,7 @@ import re
 from typing import NamedTuple
 
 from ..atomic.levels import level_name
-from ..errors import InputError
+from ..errors import InputError, cut_short
 from ..history.cost import HIGHEST_N
 from ..quantities import ALIASES, AT_REDSHIFT, OBSERVABLES, at_redshift, known_targets
 
@@ -58,18 +58,22 @@ def parse_target(text: str) -> Target:
     """
     match = re.fullmatch(r"\s*([\w*]+)\s*(?:\((.*)\))?\s*", text, re.ASCII)
     if match is None:
-        raise InputError(f'target "{text}" is not known; known are {known_targets()}')
+        raise InputError(f"{_given(text)} is not known; known are {known_targets()}")
     name, argument = ALIASES.get(match[1], match[1]), match[2]
     if name in OBSERVABLES:
         if argument is not None:
-            raise InputError(f'target "{text}": {name} takes no argument')
+            raise InputError(f"{_given(text)}: {name} takes no argument")
         return Target(name, "observable", OBSERVABLES[name].unit)
     if name in AT_REDSHIFT:
         redshift = _redshift(text, match[1], argument)
         return Target(at_redshift(name, redshift), name, AT_REDSHIFT[name], redshift)
     if name == "line":
         return _line(text, argument)
-    raise InputError(f'target "{text}" is not known; known are {known_targets()}')
+    raise InputError(f"{_given(text)} is not known; known are {known_targets()}")
+
+
+def _given(text: str) -> str:
+    return f'target "{cut_short(text)}"'
 
 
 def _redshift(text: str, name: str, argument: str | None) -> float:
@@ -79,7 +83,7 @@ def _redshift(text: str, name: str, argument: str | None) -> float:
         redshift = math.nan
     if not 0.0 <= redshift <= _HIGHEST_REDSHIFT:
         raise InputError(
-            f'target "{text}": a redshift from 0 to {_HIGHEST_REDSHIFT:g} is needed, as in '
+            f"{_given(text)}: a redshift from 0 to {_HIGHEST_REDSHIFT:g} is needed, as in "
             f"{name}(900)"
         )
     return redshift + 0.0  # not -0
@@ -89,17 +93,17 @@ def _line(text: str, argument: str | None) -> Target:
     level = rf"\s*(\d{{1,4}})([{_LETTERS}])\s*"
     match = re.fullmatch(f"{level}-{level}", argument or "")
     if match is None:
-        raise InputError(f'target "{text}": two levels are needed, as in line(3d-2p)')
+        raise InputError(f"{_given(text)}: two levels are needed, as in line(3d-2p)")
     ends = [(int(match[k]), _LETTERS.index(match[k + 1])) for k in (1, 3)]
     for n, l in ends:
         if not l < n <= HIGHEST_N:
             allowed = f"n is 1 to {HIGHEST_N} and l below n"
-            raise InputError(f'target "{text}": there is no level {level_name(n, l)}; {allowed}')
+            raise InputError(f"{_given(text)}: there is no level {level_name(n, l)}; {allowed}")
     lower, upper = sorted(ends)
     dipole = lower[0] != upper[0] and abs(lower[1] - upper[1]) == 1
     if not dipole and (upper, lower) != ((2, 0), (1, 0)):
         raise InputError(
-            f'target "{text}": no line: n must differ, and l by one; 2s-1s is the exception'
+            f"{_given(text)}: no line: n must differ, and l by one; 2s-1s is the exception"
         )
     name = f"line({level_name(*upper)}-{level_name(*lower)})"
     return Target(name, "line", "1", math.nan, upper, lower)

@@ -36,7 +36,7 @@ from tests.invented_escape import both, cheap_study
 from tests.invented_history import history_with_field, invented_history
 from tests.invented_weighing import band_targets, invented_budget, invented_weighing, with_helium
 from tests.small_helium import helium_history
-from tests.small_levels import small_study
+from tests.small_levels import small_helium_study, small_study
 from tests.small_runs import small_setup
 from tests.small_tables import small_table
 from tests.unit.test_store_sweep import invented as invented_sweep
@@ -59,6 +59,7 @@ KINDS = (
     "sweep apart",
     "helium",
     "helium escape",
+    "helium levels",
     "helium table",
     "helium weighing",
 )
@@ -95,6 +96,8 @@ def helium_record(kind: str) -> Any:
     """Results with levels of helium in them."""
     if kind == "helium escape":
         return both()
+    if kind == "helium levels":
+        return small_helium_study()
     if kind == "helium table":
         return helium_table()
     if kind == "helium weighing":
@@ -420,3 +423,13 @@ def test_helium_has_its_tables_figures_and_answers() -> None:
     assert "Lines of He I: What came out" in studied and "Lines of He I: Figures" in studied
     assert page_of("escape").count("<figure") < studied.count("<figure")
     assert "helium: lines to the ground state" in page_of("helium table")
+
+
+def test_a_ladder_of_helium_names_its_atom() -> None:
+    """A bare n_max is that of hydrogen, on the page as on the screen."""
+    page = page_of("helium levels")
+    assert "How many levels of helium matter" in page
+    text = " ".join(" ".join(tree_of(page).itertext()).split())
+    assert "helium n_max = 4 (truncation" in text and "rungs, helium n_max 4, 5, 6, 8" in text
+    assert "at helium n_max = 8." in text and "hydrogen has n_max = 4 on every rung" in text
+    assert "helium n_max" not in page_of("levels")

@@ -18,7 +18,7 @@ from tests.invented_weighing import invented_weighing
 from tests.unit.test_report_page import record_of
 
 NO_BROWSER = "no browser here: chromium is not on the path (apt-get install chromium)"
-KINDS = ("field", "failed", "levels", "escape", "certificate", "budget", "sweep")
+KINDS = ("field", "failed", "levels", "helium levels", "escape", "certificate", "budget", "sweep")
 WIDTHS = (390, 1400)
 
 

@@ -11,7 +11,7 @@ from ...studies.answers import level_answer
 from ...studies.level_checks import LARGE, check_held_out, check_limit, resolved_text, shell_changes
 from ...studies.level_records import LevelStudy
 from ...studies.level_requirement import Demands, demands_text
-from ...studies.verdict import Verdict, population_changes, rung_errors, verdict_text
+from ...studies.verdict import Verdict, n_max_name, population_changes, rung_errors, verdict_text
 from ..level_checks import check_figure, resolve_figure
 from ..levels import level_figure
 from .content import Block, Chapter, Facts, Origin, Picture, Section, Table
@@ -48,7 +48,7 @@ def levels_chapter(study: LevelStudy, origin: Origin, prefix: str) -> Chapter:
     found, met = level_answer(study)
     rungs = ", ".join(str(n) for n in study.rungs.n_max.tolist())
     asked = (
-        ("rungs, n_max", rungs),
+        (f"rungs, {n_max_name(study.atom)}", rungs),
         ("error of x_e allowed", f"{found.within:g} at {found.low:g} < z < {found.high:g}"),
     )
     return Chapter(
@@ -71,11 +71,11 @@ def levels_chapter(study: LevelStudy, origin: Origin, prefix: str) -> Chapter:
 
 def _answers(study: LevelStudy, found: Verdict, met: Demands | None) -> tuple[str, ...]:
     longest = int(study.rungs.n_max[-1])
-    said = [verdict_text(found, longest)]
+    said = [verdict_text(found, longest, study.atom)]
     if study.resolved is not None:
         said.append(resolved_text(study, found.within, found.low, found.high))
     if met is not None:
-        said.append(demands_text(met, longest))
+        said.append(demands_text(met, longest, study.atom))
     return tuple(said)
 
 
@@ -106,10 +106,10 @@ def _rungs(study: LevelStudy, found: Verdict) -> Table:
     )
     caption = (
         f"Truncation: largest relative error of x_e at {found.low:g} < z < {found.high:g}, its "
-        "error bar counted, and largest difference of a population of n = 2 to 4 from that of the "
-        "longest rung"
+        "error bar counted, and largest difference of a population of hydrogen, n = 2 to 4, from "
+        "that of the longest rung"
     )
-    return Table(caption, ("n_max", "error of x_e", "populations"), rows)
+    return Table(caption, (n_max_name(study.atom), "error of x_e", "populations"), rows)
 
 
 def _limit(study: LevelStudy) -> Table:
@@ -141,12 +141,17 @@ def _observables(study: LevelStudy) -> Table:
         unit = unit_text(study.observable_units[k])
         change = signed_percent(float(last[k]) / value - 1.0)
         rows.append((observable_label(name), f"{value:.8g} {unit}".rstrip(), f"{bar:.1e}", change))
-    head = ("observable", "all levels", "error bar", f"n_max = {study.rungs.n_max[-1]}")
+    head = (
+        "observable",
+        "all levels",
+        "error bar",
+        f"{n_max_name(study.atom)} = {study.rungs.n_max[-1]}",
+    )
     return Table("Observables carried to all levels", head, tuple(rows))
 
 
 def _demands(study: LevelStudy, met: Demands) -> Table:
-    head = ("n_max", *(limit_text(one) for one in met.longer))
+    head = (n_max_name(study.atom), *(limit_text(one) for one in met.longer))
     rows = tuple(
         (str(n), *(f"{one.error:.1e} {'ok' if one.passed else 'no'}" for one in line))
         for n, line in zip(study.rungs.n_max.tolist(), met.rungs, strict=True)
@@ -158,16 +163,16 @@ def _pictures(study: LevelStudy, prefix: str) -> tuple[Picture, ...]:
     limit, rungs = study.limit.free_electron_fraction, study.rungs
     errors = rungs.free_electron_fraction / limit.value - 1.0
     late = int(np.argmin(np.abs(study.redshift - max(200.0, float(study.redshift[-1])))))
-    n_max = rungs.n_max.tolist()
+    n_max, name = rungs.n_max.tolist(), n_max_name(study.atom)
     pictures = [
         picture(
             level_figure(study),
             f"{prefix}-levels",
             "Truncation error",
-            "Relative error of x_e against n_max (left), close to the limit of all levels "
+            f"Relative error of x_e against {name} (left), close to the limit of all levels "
             f"(middle) and of each rung against redshift (right). At z = {study.redshift[late]:.0f}"
-            f" it falls from {signed_percent(errors[0, late])} at n_max = {n_max[0]} to "
-            f"{signed_percent(errors[-1, late])} at n_max = {n_max[-1]}.",
+            f" it falls from {signed_percent(errors[0, late])} at {name} = {n_max[0]} to "
+            f"{signed_percent(errors[-1, late])} at {name} = {n_max[-1]}.",
         )
     ]
     checked = check_held_out(study)
@@ -213,7 +218,7 @@ def _trust(study: LevelStudy) -> tuple[Block, ...]:
     if checked is not None and study.held_out is not None:
         rows += [
             (
-                f"n_max = {n}, foreseen from shorter rungs",
+                f"{n_max_name(study.atom)} = {n}, foreseen from shorter rungs",
                 f"off by at most {miss:.2f} of its error bar"
                 + ("" if miss <= 1.0 else ": OUTSIDE THE BAR"),
             )

@@ -9,7 +9,7 @@ from typing import Any
 
 import numpy as np
 
-from ...errors import Outcome
+from ...errors import Outcome, cut_short
 from ...studies.sweep_record import Sweep
 from ..sweep import case_curve, drawn_cases, sweep_figure
 from .content import Block, Chapter, Facts, Listing, Origin, Picture, Section, Table
@@ -116,8 +116,7 @@ def _cases(sweep: Sweep) -> Table:
 def _cell(value: object) -> str:
     if isinstance(value, float):
         return f"{value:.6g}" if math.isfinite(value) else "default"
-    text = one_line(str(value))
-    return text if len(text) <= 40 else f"{text[:40]}..."
+    return cut_short(one_line(str(value)), 40)
 
 
 def _pictures(sweep: Sweep, prefix: str) -> tuple[Picture, ...]:
