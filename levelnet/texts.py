@@ -22,8 +22,8 @@ _MOST_KEYS, _MOST_MARKS, _LONGEST_WORD = 10_000, 2_000_000, 1000
 # begins no whole string; words that are too long. The repeats give nothing back: each letter is
 # seen once.
 _MARKS = re.compile(
-    r'''"{3}(?:[^"\\]++|\\.|"(?!""))*+"{3,5}|'{3}.*?'{3,5}'''
-    r'''|"(?!"")(?:[^"\\\n]++|\\.)*+"|'(?!'')[^'\n]*+'|\#[^\n]*+|[].=,\n[{}"']'''
+    r""""{3}(?:[^"\\]++|\\.|"(?!""))*+"{3,5}|'{3}.*?'{3,5}"""
+    r"""|"(?!"")(?:[^"\\\n]++|\\.)*+"|'(?!'')[^'\n]*+'|\#[^\n]*+|[].=,\n[{}"']"""
     rf"|(?<![\w-])[\w-]{{{_LONGEST_WORD}}}",
     re.DOTALL,
 )
@@ -142,7 +142,7 @@ def _check_marks(text: str, where: str) -> None:
         if count >= _MOST_MARKS:
             raise InputError(f"{line}: over {_MOST_MARKS} points, commas, lines and brackets")
         if keys > _MOST_KEYS:
-            raise InputError(f"{line}: over {_MOST_KEYS} keys and tables")
+            raise InputError(f"{line}: over {_MOST_KEYS} keys, tables and lists")
         raise InputError(
             f"{line}: nested too deeply; at most {MOST_PARTS} parts of a key, tables or lists "
             "one inside the other are allowed"

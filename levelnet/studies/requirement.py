@@ -18,7 +18,6 @@ from ..texts import MOST_TOML, parse_toml, read_text
 from .response import Response, read_response
 from .targets import parse_target
 
-
 Error = Annotated[float, Field(gt=0.0, le=1.0)]
 Redshift = Annotated[float, Field(ge=0.0, le=10_000.0)]
 

@@ -29,8 +29,8 @@ def load_sweep(path: str | Path, setup: str | Path | None = None) -> Cases:
     Parameters
     ----------
     path : str or Path
-        A CSV file, if its name ends in ``.csv``: a header of dotted keys of a setup, then one row
-        for each case, each on a line of its own; an empty cell leaves its key out. Else a TOML file: the table ``setup`` (or
+        A CSV file, if its name ends in ``.csv``: a header of dotted keys of a setup, then one line
+        for each case; an empty cell leaves its key out. Else a TOML file: the table ``setup`` (or
         the name of a setup file, relative to the current directory), and ``combine`` or
         ``together`` with lists of values, or ranges ``{ from, to, count, spacing }``, by dotted
         keys.
@@ -100,7 +100,9 @@ def _values(given: Any) -> list[Any]:
     if not isinstance(given, Mapping):
         raise ValueError("a list of values is needed, or { from = , to = , count = }")
     if unknown := sorted(set(given) - _RANGE):
-        raise ValueError(f"{cut_short(unknown[0])}: unknown key; allowed are from, to, count, spacing")
+        raise ValueError(
+            f"{cut_short(unknown[0])}: unknown key; allowed are from, to, count, spacing"
+        )
     low, high, count = given["from"], given["to"], given.get("count")
     spacing = given.get("spacing", "even")
     if not all(isinstance(one, int | float) and math.isfinite(one) for one in (low, high)):

@@ -176,6 +176,23 @@ def test_damaged_pieces_of_a_cache(folder: Path, judge: Judge) -> None:
 
 
 @pytest.mark.slow
+def test_bomb_of_zeros(folder: Path, judge: Judge) -> None:
+    """A sound file of a few megabytes whose arrays would take 1.3e9 bytes."""
+    content, path = read_content(sample(LAYOUTS[0].name, folder)), folder / "bomb.h5"
+    for name, stored in content.variables.items():
+        if name.startswith("history/") and stored.dimensions == ("redshift",):
+            zeros = np.zeros(13_000_000)
+            content.variables[name] = Stored(stored.dimensions, stored.attributes, zeros)
+    content.attributes["digest"] = content_digest(content)
+    with path.open("w+b") as raw:
+        save(content, raw)
+    sealed_again(path)
+    assert path.stat().st_size < 20_000_000
+    assert judge.ask(kind="hdf5", path=str(path), digest="", command=True) == "refused"
+    assert judge.peak < MOST_BYTES
+
+
+@pytest.mark.slow
 def test_every_layout_has_a_sample(folder: Path) -> None:
     found = {read_content(sample(kind, folder)).attributes["layout"] for kind in RESULTS}
     assert found == {one.name for one in LAYOUTS}
