@@ -26,7 +26,7 @@ from ..escape.frequency_step import (
 )
 from ..escape.lines import HIGHEST_FED, Lines
 from ..markup import html_text
-from ..records import build, checked_record, from_mapping
+from ..records import FIRST_FAULT, build, checked_record, from_mapping
 from ..texts import MOST_TOML, parse_toml, read_text
 
 _MOST_FED_LINES = 10
@@ -50,7 +50,7 @@ class Grid:
     redshift_start: Annotated[float, Field(gt=0.0, le=10_000.0)] = 1800.0
     redshift_end: Annotated[float, Field(ge=0.0, lt=10_000.0)] = 20.0
     n_redshifts: Annotated[int, Field(ge=2, le=100_000)] = 200
-    redshifts: tuple[float, ...] | None = None
+    redshifts: Annotated[tuple[float, ...], FIRST_FAULT] | None = None
 
     def __post_init__(self) -> None:
         """Check the rules about several fields."""

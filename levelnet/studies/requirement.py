@@ -9,7 +9,7 @@ from pathlib import Path
 from typing import Annotated, Any, Literal
 
 import numpy as np
-from pydantic import Field
+from pydantic import BeforeValidator, Field
 
 from ..arrays import FloatArray
 from ..errors import InputError
@@ -20,6 +20,13 @@ from .targets import parse_target
 
 Error = Annotated[float, Field(gt=0.0, le=1.0)]
 Redshift = Annotated[float, Field(ge=0.0, le=10_000.0)]
+_MOST_RANGES = 100
+
+
+def _few_ranges(value: object) -> object:
+    if isinstance(value, list | tuple) and len(value) > _MOST_RANGES:
+        raise ValueError(f"{len(value)} ranges, at most {_MOST_RANGES} are allowed")
+    return tuple(value) if isinstance(value, list) else value
 
 
 @checked_record
@@ -91,7 +98,9 @@ class Requirement:
 
     title: str = ""
     observables: dict[str, Error] = dataclasses.field(default_factory=dict)
-    ranges: tuple[Annotated[Range, from_mapping(Range)], ...] = ()
+    ranges: Annotated[
+        tuple[Annotated[Range, from_mapping(Range)], ...], BeforeValidator(_few_ranges)
+    ] = ()
     response: Annotated[ResponseLimit, from_mapping(ResponseLimit)] | None = None
 
     def __post_init__(self) -> None:

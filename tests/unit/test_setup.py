@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import tomllib
+import tracemalloc
 from pathlib import Path
 from typing import Any
 
@@ -204,6 +205,28 @@ def test_long_and_many_complaints_are_cut() -> None:
     text = complaint(**{f"x{k}": 1 for k in range(1000)})
     assert text.endswith("; and 980 further complaints")
     assert len(text) < 2000
+
+
+@pytest.mark.parametrize(
+    "part",
+    [
+        "[grid]\nredshifts = [{}]\n",
+        "[cosmology]\nneutrino_masses_ev = [{}]\n",
+        "[cosmology]\nexpansion_redshift = [{}]\n",
+        "[rates]\nrows = [{}]\n",
+    ],
+)
+def test_a_long_list_of_bad_values_costs_nothing(part: str) -> None:
+    # Each complaint would take a kilobyte: 30 MB here, 2 GB for a file of 4 MB.
+    text = part.format("[], " * 30_000)
+    tracemalloc.start()
+    try:
+        with pytest.raises(InputError, match=r"\w\.0 = "):
+            parse_setup(text)
+        peak = tracemalloc.get_traced_memory()[1]
+    finally:
+        tracemalloc.stop()
+    assert peak < 15e6
 
 
 def test_highest_n_resolved_in_l() -> None:
