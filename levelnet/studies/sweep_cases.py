@@ -230,7 +230,9 @@ def _column(values: Sequence[Any]) -> tuple[Any, ...]:
 def _text(value: Any) -> str:
     if value is None:
         return ""
-    return value if isinstance(value, str) else json.dumps(value)
+    if isinstance(value, bool | int | float | list | tuple | Mapping):
+        return json.dumps(value, default=str)
+    return str(value)  # text, or a date, which TOML knows
 
 
 def flat(table: Mapping[str, Any], start: str = "") -> Iterator[tuple[str, Any]]:

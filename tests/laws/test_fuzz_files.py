@@ -33,7 +33,7 @@ from tests.damaged_files import (
 )
 from tests.sample_files import PIECE_KEY, RESULTS, TEXTS, piece
 
-# Per kind of file: in all 13 x 800 of results, 6 x 400 of texts and 400 pieces: over 13,000.
+# Per kind of file: in all 13 x 800 of results, 8 x 400 of texts and 400 pieces: over 13,000.
 PLAIN, SEALED, EDITED, FORGED, TEXT = 480, 130, 130, 60, 400
 
 

@@ -126,6 +126,13 @@ def test_an_empty_cell_does_not_make_the_table_of_its_key(tmp_path: Path) -> Non
     assert cases.columns[1] == ("", "false")
 
 
+def test_a_date_is_a_title_like_any_other(tmp_path: Path) -> None:
+    base = BASE.replace("[setup.", "[")
+    cases = loaded(tmp_path, "title\n2026-12-01\nplain\n", "rows.csv", setup=base)
+    assert [one.title for one in cases.setups] == ["2026-12-01", "plain"]
+    assert cases.columns == (("2026-12-01", "plain"),)
+
+
 def test_from_python() -> None:
     setup = small_setup(5)
     cases = vary(setup, {"hydrogen.n_max": [4, 6]}, {"grid.redshift_end": [200.0, 300.0]})
