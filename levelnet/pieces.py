@@ -168,12 +168,15 @@ class ResultFolder(FolderPieces):
 
     def put(self, key: str, arrays: Mapping[str, FloatArray]) -> None:
         """Keep `arrays` under `key`; InputError, with its cause, where that cannot be done."""
+        path = self._path(key)
         try:
             self.folder.mkdir(parents=True, exist_ok=True)
-            self._write(self._path(key), _pack(key, arrays))
+            self._write(path, _pack(key, arrays))
         except OSError as error:
             reason = error.strerror or str(error)
-            raise InputError(f"{self.folder}: cannot be written: {reason}") from error
+            # The file itself where something else has taken its place.
+            where = path if path.is_dir() else self.folder
+            raise InputError(f"{where}: cannot be written: {reason}") from error
 
 
 def text_array(text: str) -> FloatArray:

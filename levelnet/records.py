@@ -9,16 +9,25 @@ from __future__ import annotations
 import dataclasses
 import functools
 import json
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Mapping, Sequence
 from typing import Any, TypeVar, dataclass_transform
 
 import numpy as np
-from pydantic import BeforeValidator, ConfigDict, TypeAdapter, ValidationError, ValidationInfo
+from pydantic import (
+    BeforeValidator,
+    ConfigDict,
+    Field,
+    TypeAdapter,
+    ValidationError,
+    ValidationInfo,
+)
 from pydantic.dataclasses import dataclass as pydantic_dataclass
 
 from .errors import InputError, cut_short
 
 T = TypeVar("T")
+MOST_COMPLAINTS = 20
+"""How many complaints one line lists; further ones are counted."""
 
 _CONFIG = ConfigDict(extra="forbid", strict=True, allow_inf_nan=False, arbitrary_types_allowed=True)
 
@@ -53,6 +62,8 @@ def as_tuples(value: object) -> object:
 
 TUPLES = BeforeValidator(as_tuples)
 """Mark of a field that holds tuples and may be given lists or arrays."""
+FIRST_FAULT: Any = Field(fail_fast=True)
+"""Mark of a tuple of any length: its first bad value is told, since each takes a kilobyte."""
 
 
 def from_mapping(cls: type) -> BeforeValidator:
@@ -73,7 +84,7 @@ def build(cls: type[T], values: Mapping[str, object]) -> T:
     """Make a checked record from nested mappings; one InputError lists every complaint."""
     made = attempt(cls, values)
     if isinstance(made, Complaints):
-        raise InputError("; ".join(made))
+        raise InputError(_listed(made))
     return made
 
 
@@ -91,9 +102,16 @@ def attempt(cls: type[T], values: Mapping[str, object]) -> T | Complaints:
         return Complaints(_complaint(item, None) for item in error.errors(include_url=False))
 
 
+def _listed(complaints: Sequence[str]) -> str:
+    """All complaints as one text; what goes beyond a page is counted."""
+    more = len(complaints) - MOST_COMPLAINTS
+    further = [f"and {more} further complaints"] if more > 0 else []
+    return "; ".join([*complaints[:MOST_COMPLAINTS], *further])
+
+
 def explain(error: ValidationError, record: Any = None) -> str:
     """Say every complaint of `error`, each as path, value, and what is allowed."""
-    return "; ".join(_complaint(item, record) for item in error.errors(include_url=False))
+    return _listed([_complaint(item, record) for item in error.errors(include_url=False)])
 
 
 def _complaint(item: Any, record: Any) -> str:
@@ -101,7 +119,7 @@ def _complaint(item: Any, record: Any) -> str:
     if record is not None and location and isinstance(location[0], int):
         # A positional argument: name it.
         location[0] = dataclasses.fields(record)[location[0]].name
-    path = ".".join(str(part) for part in location)
+    path = ".".join(cut_short(str(part)) for part in location)
     if not path:  # a rule about several fields; its text names them
         return str(item["msg"]).removeprefix("Value error, ")
     if item["type"] in {"unexpected_keyword_argument", "extra_forbidden"}:

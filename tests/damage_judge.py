@@ -30,6 +30,13 @@ def read_text_kind(kind: str, path: Path) -> object:
     from levelnet.studies.budget import load_uncertainties
     from levelnet.studies.requirement import load_requirement
     from levelnet.studies.response import read_response
+    from levelnet.studies.sweep_files import load_sweep
+
+    def read_rows(one: Path) -> object:
+        named = one.with_suffix(".csv")  # which makes it CSV
+        named.unlink(missing_ok=True)
+        named.symlink_to(one)
+        return load_sweep(named)
 
     readers: dict[str, Callable[[Path], object]] = {
         "setup": load_setup,
@@ -38,6 +45,8 @@ def read_text_kind(kind: str, path: Path) -> object:
         "overrides": lambda one: Rates(overrides=str(one)).table,
         "response": read_response,
         "expansion": read_expansion_table,
+        "sweep": load_sweep,
+        "rows": read_rows,
     }
     return readers[kind](path)
 

@@ -110,6 +110,25 @@ def _expansion(path: Path) -> None:
     write_expansion_table(table, path)
 
 
+def _sweep(path: Path) -> None:
+    setup = small_setup(4, 400.0).to_toml().replace("\n[", "\n[setup.")
+    first, table, rest = setup.partition("\n[")
+    path.write_text(
+        f"title = 'invented'\n[setup]\n{first}{table}{rest}\n[combine]\nhydrogen.n_max = [4, 5]\n"
+        "cosmology.helium_mass_fraction = { from = 0.2, to = 0.25, count = 3 }\n",
+        encoding="utf-8",
+    )
+
+
+def _rows(path: Path) -> None:
+    path.write_text(
+        "# invented\nhydrogen.n_max,cosmology.hubble_km_s_mpc,cosmology.baryon_density_h2,"
+        "cosmology.matter_density_h2,grid.redshifts,title\n4,68,0.022,0.14,,a\n"
+        '5,70.5,0.023,0.15,"[100, 200.0]","b, c"\n6,66,0.02,0.13,,\n',
+        encoding="utf-8",
+    )
+
+
 TEXTS: dict[str, Callable[[Path], None]] = {
     "setup": _setup,
     "requirement": _requirement,
@@ -117,6 +136,8 @@ TEXTS: dict[str, Callable[[Path], None]] = {
     "overrides": _overrides,
     "uncertainties": _uncertainties,
     "expansion": _expansion,
+    "sweep": _sweep,
+    "rows": _rows,
 }
 """Writers of texts that users hand in, by the names of :mod:`tests.damage_judge`."""
 

@@ -11,7 +11,7 @@ import numpy as np
 
 from ..arrays import FloatArray, IntArray
 from ..errors import InputError
-from ..records import TUPLES, checked_record
+from ..records import FIRST_FAULT, TUPLES, checked_record
 from .selection import AtomSize, Selector, check_exists, line_mask
 from .selector_rows import (
     SELECTOR_COLUMNS,
@@ -94,7 +94,7 @@ class Rates:
     """
 
     overrides: str | None = None
-    rows: Annotated[tuple[str, ...] | None, TUPLES] = None
+    rows: Annotated[Annotated[tuple[str, ...], FIRST_FAULT] | None, TUPLES] = None
 
     def __post_init__(self) -> None:
         """Read the file and check every row."""

@@ -49,7 +49,7 @@ def read_rows(path: str | Path, columns: Sequence[str]) -> tuple[str, ...]:
     InputError
         If the file cannot be read, is too large, is no text, or has another header or no rows.
     """
-    text = read_text(path, _MOST_BYTES, "utf-8-sig")
+    text = read_text(path, _MOST_BYTES)
     lines = [line.strip() for line in io.StringIO(text, newline=None)]
     lines = [line for line in lines if line and not line.startswith("#")]
     if not lines:

@@ -6,10 +6,24 @@ from pydantic import AfterValidator, BeforeValidator, Field, ValidationInfo
 
 from ..records import checked_record
 
+HIGHEST_N = 1000
+"""Highest n of hydrogen up to which its rates are tested."""
 HELIUM_N_MAX = 100
 """Highest n of helium up to which its levels and rates are tested."""
 # s^-1; sources in :class:`Helium`.
 INTERCOMBINATION_PER_S, TWO_PHOTON_PER_S = 177.6, 51.02
+
+
+def _hydrogen_size(value: int) -> int:
+    if value <= HIGHEST_N:
+        return value
+    # n^3/3 line strengths are needed whatever is resolved; no figure beyond what is worth saying.
+    size_gb = 8e-9 * min(value, 10**9) ** 3 / 3.0
+    size = f"{size_gb:.3g} GB" if size_gb < 1000.0 else f"{1e-3 * size_gb:.3g} TB"
+    raise ValueError(
+        f"allowed are 2 to {HIGHEST_N}, up to which rates are tested (line strengths alone would "
+        f"take over {size} of memory)"
+    )
 
 
 def _helium_size(value: int) -> int:
@@ -27,7 +41,7 @@ class Hydrogen:
     n_max : int, 2 to 1000 (dimensionless)
         Highest principal quantum number; every (n, l) up to it is a level of its own unless
         `resolve_l_to` says otherwise. What fits is decided by memory, which is estimated before any
-        work; a larger n_max is refused with the memory it would need.
+        work; a larger n_max is refused with the memory that its line strengths would need.
     two_photon_rate_per_s : float, s^-1, not negative
         Total 2s-1s two-photon decay rate; 0 switches the channel off. The default is the computed
         non-relativistic 8.22487 s^-1 times the leading relativistic correction (-3.5e-5); published
@@ -45,10 +59,10 @@ class Hydrogen:
         Collisional transitions; only False so far.
     """
 
-    n_max: Annotated[int, Field(ge=2, le=100_000)]
+    n_max: Annotated[int, Field(ge=2), AfterValidator(_hydrogen_size)]
     two_photon_rate_per_s: Annotated[float, Field(ge=0.0, le=1e6)] = 8.2246
     energies: Literal["measured", "nonrelativistic"] = "measured"
-    resolve_l_to: Annotated[int, Field(ge=2, le=100_000)] | None = None
+    resolve_l_to: Annotated[int, Field(ge=2, le=HIGHEST_N)] | None = None
     collisions: Literal[False] = False
 
     def __post_init__(self) -> None:

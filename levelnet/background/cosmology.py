@@ -13,7 +13,7 @@ from pydantic import Field
 from .. import constants as const
 from ..arrays import FloatArray
 from ..errors import AccuracyWarning, RangeError
-from ..records import TUPLES, checked_record
+from ..records import FIRST_FAULT, TUPLES, checked_record
 from .clock import Clock, law_clock, table_clock
 from .expansion import ExpansionTable, inline_table, read_expansion_table
 from .friedmann import (
@@ -34,8 +34,8 @@ EXPANSION_ERROR_LIMIT = 1e-4
 Density = Annotated[float, Field(gt=0.0, le=100.0)]
 Fraction = Annotated[float, Field(ge=0.0, lt=1.0)]
 Mass = Annotated[float, Field(ge=0.0, le=100.0)]
-Masses = Annotated[tuple[Mass, ...], Field(max_length=20), TUPLES]
-Column = Annotated[tuple[float, ...], TUPLES]
+Masses = Annotated[tuple[Mass, ...], FIRST_FAULT, Field(max_length=20), TUPLES]
+Column = Annotated[tuple[float, ...], FIRST_FAULT, TUPLES]
 
 
 class DensityParameters(NamedTuple):

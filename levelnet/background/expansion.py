@@ -27,6 +27,7 @@ from .patches import Patches, patches
 FIRST_LINE = "# levelnet expansion table"
 HEADER = "redshift,hubble_rate_per_s"
 MIN_ROWS = 16
+MAX_ROWS = 200_000  # what the text of a setup can carry; the spline errs by 1e-16 long before
 # Hydrogen recombines below this redshift; a table that ends lower cannot carry a history.
 MIN_LAST_REDSHIFT = 3000.0
 _MAX_BYTES = 64_000_000
@@ -39,7 +40,7 @@ class ExpansionTable:
     Attributes
     ----------
     redshift : ndarray, shape (n_redshift,), dimensionless
-        Strictly ascending from 0 to at least 3000; at least 16 rows.
+        Strictly ascending from 0 to at least 3000; 16 to 200,000 rows.
     hubble_rate_per_s : ndarray, shape (n_redshift,), s^-1
         Expansion rate, positive.
     interpolation_error : float, dimensionless
@@ -121,6 +122,8 @@ def _check_rows(redshift: FloatArray, rate: FloatArray) -> None:
         )
     if len(redshift) < MIN_ROWS:
         raise InputError(f"{where}: {len(redshift)} rows, at least {MIN_ROWS} are needed")
+    if len(redshift) > MAX_ROWS:
+        raise InputError(f"{where}: {len(redshift)} rows, at most {MAX_ROWS} are allowed")
     for name, values, good in (
         ("redshift", redshift, np.isfinite(redshift)),
         ("hubble_rate_per_s", rate, np.isfinite(rate) & (rate > 0.0)),

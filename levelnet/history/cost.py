@@ -23,7 +23,6 @@ _EVALUATIONS = 4000
 _SECONDS_PER_CELL = 7e-9
 _WITH_COARSER = 1.25  # with the run on a grid twice as coarse that tells the error
 _FIELD_START = 1900.0  # about where a field is first resolved, 1 + z
-HIGHEST_N = 1000
 _RESERVE_BYTES = 3e8
 # Arrays over shells and resolved levels alive at once: strengths, rates, response, work space.
 _BORDERS = 6.0
@@ -162,7 +161,7 @@ def check_memory(
     populations: int | None = None,
     coldest_k: float | None = None,
 ) -> Cost:
-    """Estimate the cost; InputError with the figure if it cannot fit or n_max is out of range.
+    """Estimate the cost; InputError with the figure if it cannot fit.
 
     With `copies` worker processes, each of which holds an atom of its own, all must fit at once;
     `more_bytes` is what else the caller will hold, `populations` and `coldest_k` as for
@@ -177,7 +176,7 @@ def check_memory(
 
 
 def check_fits(setup: Setup, needed_bytes: float, workers: int = 1) -> None:
-    """Raise InputError, with the figure, if so much memory is not there or n_max is too high.
+    """Raise InputError, with the figure, if so much memory is not there.
 
     Parameters
     ----------
@@ -189,18 +188,14 @@ def check_fits(setup: Setup, needed_bytes: float, workers: int = 1) -> None:
         How many these are.
     """
     available = available_memory_bytes()
-    n = setup.hydrogen.n_max
     by = f" by {workers} workers" if workers > 1 else ""
-    figure = f"about {_readable(needed_bytes)} of memory needed{by}"
     if needed_bytes > available:
-        asked = f"hydrogen.n_max = {n}"
+        asked = f"hydrogen.n_max = {setup.hydrogen.n_max}"
         if setup.helium_recombines:
             asked += f", helium.n_max = {setup.helium.n_max}"
-        raise InputError(f"{asked}: {figure}, {_readable(available)} available")
-    if n > HIGHEST_N:
         raise InputError(
-            f"hydrogen.n_max = {n}: {figure}; the highest allowed is {HIGHEST_N}, "
-            "up to which rates are tested"
+            f"{asked}: about {_readable(needed_bytes)} of memory needed{by}, "
+            f"{_readable(available)} available"
         )
 
 

@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import dataclasses
 import hashlib
-import tomllib
 from collections.abc import Mapping
 from pathlib import Path
 from typing import Annotated, Any
@@ -27,11 +26,10 @@ from ..escape.frequency_step import (
 )
 from ..escape.lines import HIGHEST_FED, Lines
 from ..markup import html_text
-from ..records import build, checked_record, from_mapping
-from ..texts import read_text
+from ..records import FIRST_FAULT, build, checked_record, from_mapping
+from ..texts import MOST_TOML, parse_toml, read_text
 
 _MOST_FED_LINES = 10
-_MOST_BYTES = 64_000_000  # an expansion table may stand inside
 
 
 @checked_record
@@ -52,7 +50,7 @@ class Grid:
     redshift_start: Annotated[float, Field(gt=0.0, le=10_000.0)] = 1800.0
     redshift_end: Annotated[float, Field(ge=0.0, lt=10_000.0)] = 20.0
     n_redshifts: Annotated[int, Field(ge=2, le=100_000)] = 200
-    redshifts: tuple[float, ...] | None = None
+    redshifts: Annotated[tuple[float, ...], FIRST_FAULT] | None = None
 
     def __post_init__(self) -> None:
         """Check the rules about several fields."""
@@ -312,13 +310,7 @@ def parse_setup(text: str, where: str = "setup", with_files: bool = True) -> Set
 
     Where `with_files` is False the text must hold everything itself: no other file is opened.
     """
-    try:
-        values = tomllib.loads(text)
-    except (
-        ValueError,
-        RecursionError,
-    ) as error:  # TOMLDecodeError is a ValueError; so are huge numbers
-        raise InputError(f"{where}: not valid TOML: {error}") from None
+    values = parse_toml(text, where)
     try:
         if not with_files:
             _refuse_files(values)
@@ -353,4 +345,4 @@ def load_setup(path: str | Path) -> Setup:
         If the file cannot be read or any key is unknown, missing, of the wrong type or out of
         range; the text lists every complaint with its path.
     """
-    return parse_setup(read_text(path, _MOST_BYTES), str(path))
+    return parse_setup(read_text(path, MOST_TOML), str(path))

@@ -38,7 +38,9 @@ def content_digest(content: Content) -> str:
     def put(*pieces: object) -> None:
         for piece in pieces:
             data = (
-                piece if isinstance(piece, bytes) else str(piece).encode("utf-8", "surrogatepass")
+                piece
+                if isinstance(piece, memoryview)
+                else str(piece).encode("utf-8", "surrogatepass")
             )
             total.update(b"%d:" % len(data))
             total.update(data)
@@ -65,7 +67,8 @@ def _data(stored: Stored) -> tuple[object, ...]:
     if isinstance(stored.values, tuple):
         return ("text", *stored.values)
     values = stored.values.astype(stored.values.dtype.newbyteorder("<"), copy=False)
-    return (values.dtype.str, np.ascontiguousarray(values).tobytes())
+    # Its bytes in place: a copy would double the memory that the largest array takes.
+    return (values.dtype.str, np.ascontiguousarray(values).reshape(-1).view(np.uint8).data)
 
 
 def seal(raw: BinaryIO) -> None:

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import tomllib
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
@@ -11,6 +10,7 @@ from ..errors import Outcome
 from ..history.result import Channels, RadiationField
 from ..history.setup import Setup
 from ..markup import html_table
+from ..texts import parse_toml
 from .level_records import Question
 
 if TYPE_CHECKING:
@@ -68,7 +68,7 @@ class Variants:
 
     def chosen(self, variant: int) -> dict[str, Any]:
         """Table [lines] of a variant by its position."""
-        return tomllib.loads(self.lines[variant])
+        return parse_toml(self.lines[variant], f"lines of variant {variant}")
 
 
 @dataclass(frozen=True, slots=True, eq=False)

@@ -7,10 +7,9 @@ import itertools
 from collections.abc import Sequence
 from typing import Literal
 
-from ..atomic.species import HELIUM_N_MAX
+from ..atomic.species import HELIUM_N_MAX, HIGHEST_N
 from ..errors import InputError
 from ..escape.lines import HIGHEST_FED
-from ..history.cost import HIGHEST_N
 from ..history.setup import Setup
 from .convergence import check_rung_count
 

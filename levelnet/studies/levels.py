@@ -11,8 +11,9 @@ from functools import partial
 import numpy as np
 
 from ..arrays import FloatArray
+from ..atomic.species import HIGHEST_N
 from ..errors import InputError, Outcome
-from ..history.cost import HIGHEST_N, check_memory, estimate
+from ..history.cost import check_memory, estimate
 from ..history.integrate import Progress, output_redshifts
 from ..history.setup import Setup
 from ..pieces import Pieces

@@ -3,26 +3,30 @@
 from __future__ import annotations
 
 import dataclasses
-import tomllib
 from collections.abc import Mapping
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Annotated, Any, Literal
 
 import numpy as np
-from pydantic import Field
+from pydantic import BeforeValidator, Field
 
 from ..arrays import FloatArray
 from ..errors import InputError
 from ..records import TUPLES, build, checked_record, from_mapping
-from ..texts import read_text
+from ..texts import MOST_TOML, parse_toml, read_text
 from .response import Response, read_response
 from .targets import parse_target
 
-_MOST_BYTES = 64_000_000  # a response may stand inside
-
 Error = Annotated[float, Field(gt=0.0, le=1.0)]
 Redshift = Annotated[float, Field(ge=0.0, le=10_000.0)]
+_MOST_RANGES = 100
+
+
+def _few_ranges(value: object) -> object:
+    if isinstance(value, list | tuple) and len(value) > _MOST_RANGES:
+        raise ValueError(f"{len(value)} ranges, at most {_MOST_RANGES} are allowed")
+    return tuple(value) if isinstance(value, list) else value
 
 
 @checked_record
@@ -94,7 +98,9 @@ class Requirement:
 
     title: str = ""
     observables: dict[str, Error] = dataclasses.field(default_factory=dict)
-    ranges: tuple[Annotated[Range, from_mapping(Range)], ...] = ()
+    ranges: Annotated[
+        tuple[Annotated[Range, from_mapping(Range)], ...], BeforeValidator(_few_ranges)
+    ] = ()
     response: Annotated[ResponseLimit, from_mapping(ResponseLimit)] | None = None
 
     def __post_init__(self) -> None:
@@ -240,10 +246,7 @@ def parse_requirement(
     InputError
         If the text is not TOML, a key is unknown or a value wrong; all complaints with their paths.
     """
-    try:
-        values = tomllib.loads(text)
-    except (ValueError, RecursionError) as error:  # huge numbers raise plain ValueErrors
-        raise InputError(f"{where}: not valid TOML: {error}") from None
+    values = parse_toml(text, where)
     try:
         if folder is not None and isinstance(values.get("response"), dict):
             values["response"] = _with_rows(values["response"], Path(folder))
@@ -284,5 +287,5 @@ def load_requirement(path: str | Path) -> Requirement:
     InputError
         If a file cannot be read or any key is unknown, missing, of the wrong type or out of range.
     """
-    text = read_text(path, _MOST_BYTES)
+    text = read_text(path, MOST_TOML)
     return parse_requirement(text, str(path), Path(path).parent)

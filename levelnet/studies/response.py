@@ -26,7 +26,7 @@ from pydantic import Field
 
 from ..arrays import FloatArray
 from ..errors import InputError, cut_short
-from ..records import TUPLES, checked_record
+from ..records import FIRST_FAULT, TUPLES, checked_record
 from ..texts import read_bytes
 
 FIRST_LINE = "# levelnet response"
@@ -43,9 +43,9 @@ _NODES, _WEIGHTS = np.polynomial.legendre.leggauss(3)
 
 
 Row = tuple[float, ...]
-Numbers = Annotated[Row, TUPLES]
-Matrix = Annotated[tuple[Row, ...], TUPLES]
-Names = Annotated[tuple[str, ...], TUPLES, Field(min_length=1)]
+Numbers = Annotated[Row, FIRST_FAULT, TUPLES]
+Matrix = Annotated[tuple[Annotated[Row, FIRST_FAULT], ...], FIRST_FAULT, TUPLES]
+Names = Annotated[tuple[str, ...], FIRST_FAULT, TUPLES, Field(min_length=1)]
 
 
 @checked_record

@@ -13,10 +13,13 @@ from typing import Any
 
 from ..errors import InputError, cut_short
 from ..history.setup import Setup
-from ..records import Complaints, attempt
+from ..records import MOST_COMPLAINTS, Complaints, attempt
+from ..texts import MOST_PARTS
 
 MOST_CASES = 1_000_000
-_MOST_COMPLAINTS = 20
+MOST_VALUES = 10_000_000
+"""Most cases times keys: a value takes about a hundred bytes until all setups are made."""
+_MOST_WRONG = 1000  # complaints, after which further cases are not looked at
 _LONGEST = 40  # characters of a value that a label repeats
 
 
@@ -54,7 +57,8 @@ class Cases:
 
 def case_label(k: int, values: Iterable[tuple[str, Any]]) -> str:
     """Position of a case with its swept values: "case 3 (hydrogen.n_max = 20)"."""
-    shown = ", ".join(f"{key} = {_short(value)}" for key, value in values)
+    named = [f"{cut_short(key)} = {_short(value)}" for key, value in itertools.islice(values, 21)]
+    shown = ", ".join([*named[:20], "..."] if len(named) > 20 else named)
     return f"case {k} ({shown})" if shown else f"case {k}"
 
 
@@ -101,19 +105,20 @@ def varied(
 ) -> list[tuple[str, dict[str, Any]]]:
     """Label and values of every case of a grid; InputError where it is none."""
     if twice := sorted(set(combine) & set(together)):
-        raise InputError(f"{where}: {twice[0]}: in combine and in together; give it once")
+        key = cut_short(twice[0])
+        raise InputError(f"{where}: {key}: in combine and in together; give it once")
     if not combine and not together:
         raise InputError(f"{where}: nothing is varied; give combine or together")
     lengths = {key: len(values) for key, values in (*combine.items(), *together.items())}
     if empty := [key for key, length in lengths.items() if not length]:
-        raise InputError(f"{where}: {empty[0]}: no values")
+        raise InputError(f"{where}: {cut_short(empty[0])}: no values")
     side = {lengths[key] for key in together}
     if len(side) > 1:
-        shown = ", ".join(f"{key} has {lengths[key]}" for key in together)
+        some = itertools.islice(together, MOST_COMPLAINTS)
+        shown = ", ".join(f"{cut_short(key)} has {lengths[key]}" for key in some)
         raise InputError(f"{where}: together needs lists of one length: {shown}")
     count = math.prod(lengths[key] for key in combine) * max(side, default=1)
-    if count > MOST_CASES:
-        raise InputError(f"{where}: {count} cases; allowed are up to {MOST_CASES}")
+    check_count(where, count, len(lengths))
     rows = [dict(zip(together, row, strict=True)) for row in zip(*together.values(), strict=True)]
     found: list[tuple[str, dict[str, Any]]] = []
     for values in itertools.product(*combine.values()):
@@ -123,10 +128,24 @@ def varied(
     return found
 
 
+def check_count(where: str, count: int, n_keys: int) -> None:
+    """Refuse more cases, or more values in all of them, than there is memory for."""
+    if count > MOST_CASES:
+        # A product of lists may have more digits than Python writes.
+        shown = f"{count} cases" if count < 10**18 else "too many cases"
+        raise InputError(f"{where}: {shown}; allowed are up to {MOST_CASES}")
+    if count * n_keys > MOST_VALUES:
+        raise InputError(
+            f"{where}: {count} cases of {n_keys} keys; allowed are up to {MOST_VALUES} values"
+        )
+
+
 def make_cases(
-    where: str, base: Mapping[str, Any], rows: Sequence[tuple[str, Mapping[str, Any]]], title: str
+    where: str, base: Mapping[str, Any], rows: Iterable[tuple[str, Mapping[str, Any]]], title: str
 ) -> Cases:
     """Make every setup; one InputError lists what is wrong, with the rows it is wrong in.
+
+    After a thousand complaints the cases that follow are not looked at.
 
     Parameters
     ----------
@@ -134,37 +153,47 @@ def make_cases(
         File, for the complaints.
     base : mapping
         Nested values of a setup, which need not be complete.
-    rows : sequence of (label, mapping)
+    rows : iterable of (label, mapping)
         For each case what a person calls it, and its values by dotted keys; None takes the key out.
     title : str
         What the sweep is about.
     """
     setups: list[Setup] = []
+    kept: list[Mapping[str, Any]] = []
     wrong: dict[str, list[str]] = {}
+    count = said = 0
     for label, values in rows:
+        count += 1
         made = _setup(base, values)
         if isinstance(made, Setup):
             setups.append(made)
+            kept.append(values)
             continue
         for complaint in made:
             wrong.setdefault(complaint, []).append(label)
+        said += len(made)
+        if said >= _MOST_WRONG:
+            break
     if wrong:
-        raise InputError(f"{where}: {_listed(wrong, len(rows))}")
-    keys = tuple(dict.fromkeys(key for _, values in rows for key in values))
-    columns = tuple(_column([values.get(key) for _, values in rows]) for key in keys)
+        until = f"; nothing was looked at after {label}" if said >= _MOST_WRONG else ""
+        raise InputError(f"{where}: {_listed(wrong, count)}{until}")
+    keys = tuple(dict.fromkeys(key for values in kept for key in values))
+    columns = tuple(_column([values.get(key) for values in kept]) for key in keys)
     return Cases(title, tuple(setups), keys, columns)
 
 
 def _setup(base: Mapping[str, Any], values: Mapping[str, Any]) -> Setup | Complaints:
     nested: dict[str, Any] = copy.deepcopy(dict(base))
     for key, value in values.items():
-        *outer, last = key.split(".")
+        *outer, last = key.split(".", MOST_PARTS)
+        if len(outer) == MOST_PARTS:
+            return Complaints([f"{cut_short(key)}: unknown key"])
         place = nested
         for part in outer:
             # What is left out does not make the table that it would stand in.
             inner = place.get(part, {}) if value is None else place.setdefault(part, {})
             if not isinstance(inner, dict):
-                return Complaints([f"{key}: {part} is no table"])
+                return Complaints([f"{cut_short(key)}: {cut_short(part)} is no table"])
             place = inner
         if value is None:
             place.pop(last, None)
@@ -176,14 +205,14 @@ def _setup(base: Mapping[str, Any], values: Mapping[str, Any]) -> Setup | Compla
 def _listed(wrong: Mapping[str, list[str]], count: int) -> str:
     """Every different complaint once, with where it arises; the longest lists are cut."""
     texts = []
-    for complaint, labels in itertools.islice(wrong.items(), _MOST_COMPLAINTS):
+    for complaint, labels in itertools.islice(wrong.items(), MOST_COMPLAINTS):
         if len(labels) == count > 1:
             texts.append(f"every case: {complaint}")
         else:
             more = f" and {len(labels) - 1} more" if len(labels) > 1 else ""
             texts.append(f"{labels[0]}{more}: {complaint}")
-    if len(wrong) > _MOST_COMPLAINTS:
-        texts.append(f"and {len(wrong) - _MOST_COMPLAINTS} further complaints")
+    if len(wrong) > MOST_COMPLAINTS:
+        texts.append(f"and {len(wrong) - MOST_COMPLAINTS} further complaints")
     return "; ".join(texts)
 
 
@@ -201,7 +230,9 @@ def _column(values: Sequence[Any]) -> tuple[Any, ...]:
 def _text(value: Any) -> str:
     if value is None:
         return ""
-    return value if isinstance(value, str) else json.dumps(value)
+    if isinstance(value, bool | int | float | list | tuple | Mapping):
+        return json.dumps(value, default=str)
+    return str(value)  # text, or a date, which TOML knows
 
 
 def flat(table: Mapping[str, Any], start: str = "") -> Iterator[tuple[str, Any]]:

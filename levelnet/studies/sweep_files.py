@@ -2,19 +2,22 @@
 
 from __future__ import annotations
 
+import collections
 import csv
-import io
+import itertools
 import math
-import tomllib
-from collections.abc import Mapping
+import re
+from collections.abc import Iterator, Mapping
 from pathlib import Path
 from typing import Any
 
 from ..errors import InputError, cut_short
-from ..texts import read_text
-from .sweep_cases import MOST_CASES, Cases, flat, make_cases, varied
+from ..records import MOST_COMPLAINTS
+from ..texts import MOST_TOML, parse_toml, read_text
+from .sweep_cases import MOST_CASES, MOST_VALUES, Cases, check_count, flat, make_cases, varied
 
 _MOST_BYTES = 256_000_000  # a million rows of CSV
+_LONGEST_LINE = 100_000  # characters: a thousand of all keys that there are
 _TABLES = ("setup", "combine", "together", "title")
 _RANGE = {"from", "to", "count", "spacing"}
 _SPACINGS = ("even", "logarithmic")
@@ -26,7 +29,7 @@ def load_sweep(path: str | Path, setup: str | Path | None = None) -> Cases:
     Parameters
     ----------
     path : str or Path
-        A CSV file, if its name ends in ``.csv``: a header of dotted keys of a setup, then one row
+        A CSV file, if its name ends in ``.csv``: a header of dotted keys of a setup, then one line
         for each case; an empty cell leaves its key out. Else a TOML file: the table ``setup`` (or
         the name of a setup file, relative to the current directory), and ``combine`` or
         ``together`` with lists of values, or ranges ``{ from, to, count, spacing }``, by dotted
@@ -45,30 +48,23 @@ def load_sweep(path: str | Path, setup: str | Path | None = None) -> Cases:
         If a file cannot be read or any case is no setup; the text lists every complaint with its
         key and row.
     """
-    text = read_text(path, _MOST_BYTES, "utf-8-sig")
     if Path(path).suffix.lower() == ".csv":
+        text = read_text(path, _MOST_BYTES)
         return _from_csv(str(path), text, {} if setup is None else _tables(setup))
+    given = _tables(path)
     if setup is not None:
         raise InputError(f"{path}: names its setup itself; --setup goes with CSV files only")
-    return _from_toml(str(path), text)
+    return _from_toml(str(path), given)
 
 
 def _tables(path: str | Path) -> dict[str, Any]:
-    return _parsed(str(path), read_text(path, _MOST_BYTES))
+    return parse_toml(read_text(path, MOST_TOML), str(path))
 
 
-def _parsed(where: str, text: str) -> dict[str, Any]:
-    try:
-        return tomllib.loads(text)
-    except (ValueError, RecursionError) as error:
-        raise InputError(f"{where}: not valid TOML: {error}") from None
-
-
-def _from_toml(where: str, text: str) -> Cases:
-    given = _parsed(where, text)
-    if unknown := [key for key in given if key not in _TABLES]:
-        known = ", ".join(_TABLES)
-        raise InputError(f"{where}: {', '.join(unknown)}: unknown key; allowed are {known}")
+def _from_toml(where: str, given: dict[str, Any]) -> Cases:
+    if unknown := [cut_short(key) for key in given if key not in _TABLES]:
+        known, shown = ", ".join(_TABLES), ", ".join(unknown[:MOST_COMPLAINTS])
+        raise InputError(f"{where}: {shown}: unknown key; allowed are {known}")
     base, title = given.get("setup"), given.get("title", "")
     if isinstance(base, str):
         base = _tables(base)
@@ -76,7 +72,7 @@ def _from_toml(where: str, text: str) -> Cases:
         raise InputError(f"{where}: setup: a table, or the name of a setup file, is needed")
     if not isinstance(title, str):
         raise InputError(f"{where}: title: text is needed")
-    lists, wrong = {}, []
+    lists, wrong, count = {}, [], 0
     for name in ("combine", "together"):
         table = given.get(name, {})
         if not isinstance(table, dict):
@@ -86,9 +82,13 @@ def _from_toml(where: str, text: str) -> Cases:
             try:
                 lists[name][key] = _values(value)
             except ValueError as error:
-                wrong.append(f"{name}.{key}: {error}")
+                wrong.append(f"{name}.{cut_short(key)}: {error}")
+                continue
+            count += len(lists[name][key])
+            if count > MOST_VALUES:  # many ranges of a million numbers each
+                raise InputError(f"{where}: over {MOST_VALUES} values in all lists and ranges")
     if wrong:
-        raise InputError(f"{where}: {'; '.join(wrong)}")
+        raise InputError(f"{where}: {_some(wrong)}")
     rows = varied(where, lists["combine"], lists["together"])
     return make_cases(where, base, rows, title)
 
@@ -100,7 +100,9 @@ def _values(given: Any) -> list[Any]:
     if not isinstance(given, Mapping):
         raise ValueError("a list of values is needed, or { from = , to = , count = }")
     if unknown := sorted(set(given) - _RANGE):
-        raise ValueError(f"{unknown[0]}: unknown key; allowed are from, to, count, spacing")
+        raise ValueError(
+            f"{cut_short(unknown[0])}: unknown key; allowed are from, to, count, spacing"
+        )
     low, high, count = given["from"], given["to"], given.get("count")
     spacing = given.get("spacing", "even")
     if not all(isinstance(one, int | float) and math.isfinite(one) for one in (low, high)):
@@ -129,30 +131,53 @@ def _between(low: float, high: float, count: int, spacing: str) -> list[Any]:
 
 
 def _from_csv(where: str, text: str, base: Mapping[str, Any]) -> Cases:
-    lines = [line for line in io.StringIO(text, newline=None) if line.strip()]
-    lines = [line for line in lines if not line.lstrip().startswith("#")]
-    try:
-        rows = [[cell.strip() for cell in row] for row in csv.reader(lines, strict=True)]
-    except csv.Error as error:
-        raise InputError(f"{where}: not valid CSV: {error}") from None
-    if len(rows) < 2:
+    lines = _lines(where, text)
+    header = _split(where, next(lines, ""))
+    twice = [key for key, count in collections.Counter(header).items() if count > 1]
+    if twice:
+        key = cut_short(min(twice)) or "(no name)"
+        raise InputError(f"{where}: column {key} stands there twice")
+    # Counted before any is worked on.
+    count = sum(1 for _ in itertools.islice(_lines(where, text), 1, MOST_CASES + 2))
+    if not count:
         raise InputError(f"{where}: a header of keys such as hydrogen.n_max and rows are needed")
-    header, *body = rows
-    if twice := sorted({key for key in header if header.count(key) > 1}):
-        raise InputError(f"{where}: column {twice[0] or '(no name)'} stands there twice")
+    check_count(where, count, len(header))
+    rows = [_split(where, line) for line in lines]
     wrong = [
         f"row {k}: {len(row)} cells, the header has {len(header)}"
-        for k, row in enumerate(body, 1)
+        for k, row in enumerate(rows, 1)
         if len(row) != len(header)
     ]
     if wrong:
-        more = f"; and {len(wrong) - 20} more" if len(wrong) > 20 else ""
-        raise InputError(f"{where}: {'; '.join(wrong[:20])}{more}")
-    given = [
+        raise InputError(f"{where}: {_some(wrong)}")
+    given = (
         (f"row {k}", {key: _cell(cell) for key, cell in zip(header, row, strict=True)})
-        for k, row in enumerate(body, 1)
-    ]
+        for k, row in enumerate(rows, 1)
+    )
     return make_cases(where, base, given, str(base.get("title", "")))
+
+
+def _some(wrong: list[str]) -> str:
+    more = len(wrong) - MOST_COMPLAINTS
+    return "; ".join(wrong[:MOST_COMPLAINTS]) + (f"; and {more} more" if more > 0 else "")
+
+
+def _lines(where: str, text: str) -> Iterator[str]:
+    """Lines that are neither empty nor comments."""
+    for number, found in enumerate(re.finditer(r"[^\r\n]+", text), 1):
+        if found.end() - found.start() > _LONGEST_LINE:
+            raise InputError(f"{where}: line {number} has over {_LONGEST_LINE} characters")
+        line = found[0].strip()
+        if line and not line.startswith("#"):
+            yield line
+
+
+def _split(where: str, line: str) -> list[str]:
+    # Line by line, so that an open quote does not draw the rest of the file into one cell.
+    try:
+        return [cell.strip() for cell in next(csv.reader([line], strict=True), [])]
+    except csv.Error as error:
+        raise InputError(f"{where}: not valid CSV: {error}: {cut_short(line)}") from None
 
 
 def _cell(text: str) -> Any:
@@ -160,7 +185,7 @@ def _cell(text: str) -> Any:
     if not text:
         return None
     try:
-        found = tomllib.loads(f"x = {text}")
-    except (ValueError, RecursionError):
+        found = parse_toml(f"x = {text}", "")
+    except ValueError:  # no TOML, or more than a cell may hold
         return text
     return found["x"] if set(found) == {"x"} else text

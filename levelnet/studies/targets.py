@@ -7,8 +7,8 @@ import re
 from typing import NamedTuple
 
 from ..atomic.levels import level_name
+from ..atomic.species import HIGHEST_N
 from ..errors import InputError, cut_short
-from ..history.cost import HIGHEST_N
 from ..quantities import ALIASES, AT_REDSHIFT, OBSERVABLES, at_redshift, known_targets
 
 # As in the grid of a setup.

@@ -33,7 +33,7 @@ from tests.damaged_files import (
 )
 from tests.sample_files import PIECE_KEY, RESULTS, TEXTS, piece
 
-# Per kind of file: in all 13 x 800 of results, 6 x 400 of texts and 400 pieces: over 13,000.
+# Per kind of file: in all 13 x 800 of results, 8 x 400 of texts and 400 pieces: over 13,000.
 PLAIN, SEALED, EDITED, FORGED, TEXT = 480, 130, 130, 60, 400
 
 
@@ -180,6 +180,23 @@ def test_damaged_pieces_of_a_cache(folder: Path, judge: Judge) -> None:
         assert answer == "refused", f"{case}: {answer}"
     path.write_bytes(whole)
     assert judge.ask(kind="piece", path=str(path), key=PIECE_KEY) == right
+    assert judge.peak < MOST_BYTES
+
+
+@pytest.mark.slow
+def test_bomb_of_zeros(folder: Path, judge: Judge) -> None:
+    """A sound file of a few megabytes whose arrays would take 1.3e9 bytes."""
+    content, path = read_content(sample(LAYOUTS[0].name, folder)), folder / "bomb.h5"
+    for name, stored in content.variables.items():
+        if name.startswith("history/") and stored.dimensions == ("redshift",):
+            zeros = np.zeros(13_000_000)
+            content.variables[name] = Stored(stored.dimensions, stored.attributes, zeros)
+    content.attributes["digest"] = content_digest(content)
+    with path.open("w+b") as raw:
+        save(content, raw)
+    sealed_again(path)
+    assert path.stat().st_size < 20_000_000
+    assert judge.ask(kind="hdf5", path=str(path), digest="", command=True) == "refused"
     assert judge.peak < MOST_BYTES
 
 

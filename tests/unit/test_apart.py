@@ -53,6 +53,11 @@ def answering(monkeypatch: pytest.MonkeyPatch, program: str) -> None:
         ),
         (
             "say({'variable': 'a', 'dimensions': [], 'attributes': {}, 'type': '<f8',"
+            " 'shape': [(1 << 26) + 1]})",
+            "a declares 536870920 bytes, too many for such a file",
+        ),
+        (
+            "say({'variable': 'a', 'dimensions': [], 'attributes': {}, 'type': '<f8',"
             " 'shape': [9]}); say({'bytes': 72}); sys.stdout.write('x' * 71)",
             "HDF5 does not survive",
         ),

@@ -278,8 +278,10 @@ def test_bad_arguments_are_one_line(arguments: dict[str, Any], message: str) -> 
 def test_memory_counts_every_worker(monkeypatch: pytest.MonkeyPatch) -> None:
     from levelnet.history import cost
 
-    with pytest.raises(InputError, match=r"hydrogen.n_max = 50000: about .* of memory needed, "):
-        distill(small_setup(50_000))
+    with monkeypatch.context() as little:
+        little.setattr(cost, "available_memory_bytes", lambda: 1e8)
+        with pytest.raises(InputError, match=r"hydrogen.n_max = 50: about .* of memory needed, "):
+            distill(small_setup(50))
     # Room for one atom of n_max = 5 and not for four.
     monkeypatch.setattr(cost, "available_memory_bytes", lambda: 5e8)
     with ThreadPoolExecutor(4) as pool, pytest.raises(InputError, match="needed by 4 workers"):

@@ -10,6 +10,7 @@ import os
 import subprocess
 import sys
 import time
+import tracemalloc
 from collections.abc import Iterator
 from pathlib import Path
 from typing import Any
@@ -35,6 +36,8 @@ from levelnet.store import (
     whole_file,
     write,
 )
+from levelnet.store.digest import content_digest
+from levelnet.store.schema import Content, Stored
 from tests.invented_history import history_with_field, invented_history
 from tests.same_records import assert_same
 
@@ -593,3 +596,14 @@ def test_reads_while_xarray_has_it_open(stored: Path) -> None:
     xarray = pytest.importorskip("xarray")
     with xarray.open_dataset(stored, engine="h5netcdf", group="history") as held:
         assert read(stored).redshift[0] == float(held["redshift"][0])
+
+
+def test_digest_copies_no_array() -> None:
+    numbers = {f"a/{kind}": np.zeros((1000, 1000), kind) for kind in ("<f8", "<i8", "|b1")}
+    content = Content(variables={k: Stored(("x", "y"), {}, v) for k, v in numbers.items()})
+    content_digest(content)
+    tracemalloc.start()
+    content_digest(content)
+    peak = tracemalloc.get_traced_memory()[1]
+    tracemalloc.stop()
+    assert peak < 100_000  # of 8 million bytes an array

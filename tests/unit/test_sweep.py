@@ -186,6 +186,15 @@ def test_a_place_that_cannot_be_written_is_an_error(tmp_path: Path) -> None:
         )
 
 
+def test_a_folder_in_the_place_of_a_piece_is_named(tmp_path: Path) -> None:
+    setup, finished = small_setup(4, grid=GRID), ResultFolder(tmp_path)
+    taken = finished._path(case_key(setup))
+    taken.mkdir()
+    with pytest.raises(InputError) as caught:
+        sweep(Cases("", (setup,)), finished=finished)
+    assert str(caught.value) == f"{taken}: cannot be written: Is a directory"
+
+
 @pytest.mark.parametrize(
     ("error", "reason"),
     [

@@ -6,6 +6,7 @@ What is expected is the project's own contract; counts and orders are closed for
 from __future__ import annotations
 
 import math
+import time
 from pathlib import Path
 
 import pytest
@@ -125,6 +126,13 @@ def test_an_empty_cell_does_not_make_the_table_of_its_key(tmp_path: Path) -> Non
     assert cases.columns[1] == ("", "false")
 
 
+def test_a_date_is_a_title_like_any_other(tmp_path: Path) -> None:
+    base = BASE.replace("[setup.", "[")
+    cases = loaded(tmp_path, "title\n2026-12-01\nplain\n", "rows.csv", setup=base)
+    assert [one.title for one in cases.setups] == ["2026-12-01", "plain"]
+    assert cases.columns == (("2026-12-01", "plain"),)
+
+
 def test_from_python() -> None:
     setup = small_setup(5)
     cases = vary(setup, {"hydrogen.n_max": [4, 6]}, {"grid.redshift_end": [200.0, 300.0]})
@@ -161,6 +169,52 @@ def test_a_long_list_of_complaints_is_cut(tmp_path: Path) -> None:
     said = complaint(tmp_path, BASE + f"[combine]\nhydrogen.n_max = {[-k for k in range(50)]}\n")
     assert said.endswith("; and 30 further complaints")
     assert said.count("hydrogen.n_max = -") < 60
+
+
+def test_too_many_levels_are_among_the_complaints(tmp_path: Path) -> None:
+    said = complaint(tmp_path, BASE + "[combine]\nhydrogen.n_max = [4, 1, 5000]\n")
+    assert "case 1 (hydrogen.n_max = 1): hydrogen.n_max = 1: " in said
+    assert "case 2 (hydrogen.n_max = 5000): hydrogen.n_max = 5000: allowed are 2 to 1000" in said
+
+
+DEEP = ".".join("a" * 20_000)
+# Files over which a reader takes gigabytes, minutes or its stack.
+HOSTILE = {
+    "wide.csv": ",".join(f"a{k}" for k in range(50_000)) + "\n" + ",".join("1" * 50_000) + "\n",
+    "fairly-wide.csv": ",".join(f"{k}" for k in range(10_000)) + "\n" + "1," * 9999 + "1\n",
+    "bad-rows.csv": "hydrogen.n_max\n" + "1\n" * 200_000,
+    "rows.csv": "hydrogen.n_max\n" + "5\n" * 5_000_000,
+    "cells.csv": ",".join(f"a{k}" for k in range(100)) + "\n" + ("," * 99 + "\n") * 200_000,
+    "deep-key.csv": DEEP + "\n1\n",
+    "deep-cell.csv": "hydrogen.n_max\n{" + DEEP + " = 1}\n",
+    "hexadecimal.csv": "hydrogen.n_max\n0x" + "f" * 9000 + "\n",
+    "open-quote.csv": 'hydrogen.n_max\n"' + "\n1" * 900_000,
+    "deep-key.toml": BASE + f"[combine]\n{DEEP} = [1]\n",
+    "far.toml": BASE + f"[combine]\nhydrogen.n_max = {{ from = 3, to = 1{'0' * 400}, count = 3 }}",
+    "ranges.toml": BASE
+    + "[together]\n"
+    + "".join(f"a{k} = {{ from = 0, to = 1, count = 1000000 }}\n" for k in range(500)),
+    "product.toml": BASE + "[combine]\n" + "".join(f"a{k} = [1, 2]\n" for k in range(4000)),
+    "many-keys.toml": BASE
+    + f"[combine]\na = [{'1, ' * 10_000}]\n"
+    + "".join(f"a{k} = [1]\n" for k in range(4000)),
+    "long-key.toml": BASE + f'[combine]\n"{"a" * 900_000}" = [1]\n',
+    "long-table.toml": BASE + f'["{"a" * 900_000}"]\n',
+}
+
+
+@pytest.mark.parametrize("name", HOSTILE)
+def test_files_that_blow_up_are_refused_at_once(tmp_path: Path, name: str) -> None:
+    (tmp_path / "base.toml").write_text(BASE.replace("[setup.", "["))
+    (tmp_path / name).write_text(HOSTILE[name])
+    before = time.process_time()
+    with pytest.raises(InputError) as caught:
+        load_sweep(tmp_path / name, tmp_path / "base.toml" if name.endswith(".csv") else None)
+    assert time.process_time() - before < 10.0
+    said = str(caught.value)
+    assert said.startswith(f"{tmp_path / name}: ")
+    assert "\n" not in said
+    assert len(said) < 5000
 
 
 @pytest.mark.parametrize(

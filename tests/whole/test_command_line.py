@@ -104,7 +104,7 @@ BAD_SETUPS = {
     "n_max 1": (changed("n_max = 4", "n_max = 1"), ["hydrogen.n_max = 1", "2"]),
     "n_max 10000": (
         changed("n_max = 4", "n_max = 10000"),
-        ["n_max = 10000", " TB of memory", "available"],
+        ["n_max = 10000", " TB of memory", "2 to 1000"],
     ),
     "negative density": (
         changed("baryon_density_h2 = 0.0224", "baryon_density_h2 = -0.0224"),

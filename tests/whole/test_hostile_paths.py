@@ -18,7 +18,7 @@ from tests.small_runs import small_setup
 READ = (
     *("folder", "/dev/zero", "/dev/null", "fifo", "loop", "dangling", "missing", "socket", ""),
     *("plain/x", "../../../../nowhere/x", "a" * 300, "x/" * 2500, "n\0ul", "empty", "endless"),
-    *("\x1b[31m", "new\nline", "\u202egnp.exe"),
+    *("deep", "header", "hexadecimal", "far", "\x1b[31m", "new\nline", "\u202egnp.exe"),
 )
 WRITTEN = (
     *("folder", "/dev/null", "/dev/full", "fifo", "loop", "missing/out.h5", "plain/out.h5", "/"),
@@ -54,6 +54,10 @@ def odd(tmp_path_factory: pytest.TempPathFactory) -> Iterator[Path]:
     (folder / "folder").mkdir()
     (folder / "plain").write_text("x")
     (folder / "empty").touch()
+    (folder / "deep").write_text(".".join("a" * 2000) + " = 1\n")
+    (folder / "header").write_text(f"[{'.'.join('a' * 5000)}]\n")
+    (folder / "hexadecimal").write_text(f"[hydrogen]\nn_max = 0x{'f' * 9000}\n")
+    (folder / "far").write_text(f"[combine]\nx.y = {{ from = 3, to = 1{'0' * 400}, count = 3 }}\n")
     with (folder / "endless").open("wb") as file:  # a hole of a tebibyte behind a right start
         file.write(b"\x89HDF\r\n\x1a\n")
         file.truncate(1 << 40)
