@@ -32,7 +32,7 @@ def sweep_values(sweep: Sweep, done: Progressed | None = None) -> dict[str, Any]
         ],
         "observables": {name: sweep[name] for name in sweep.observable_names},
         "observable_units": dict(zip(sweep.observable_names, sweep.observable_units, strict=True)),
-        **({} if done is None else {"computed": done.computed, "found": done.found}),
+        **({} if done is None else _counts(done)),
     }
 
 
@@ -58,7 +58,12 @@ def _counted(outcomes: Sequence[str]) -> str:
 def _done(done: Progressed | None) -> list[str]:
     if done is None:
         return []
-    return [row("done now", f"{done.computed} computed, {done.found} were there")]
+    lost = f", {done.unanswered} without an answer" if done.unanswered else ""
+    return [row("done now", f"{done.computed} computed{lost}, {done.found} were there")]
+
+
+def _counts(done: Progressed) -> dict[str, int]:
+    return {"computed": done.computed, "found": done.found, "unanswered": done.unanswered}
 
 
 def _range(key: str, column: Sequence[Any]) -> str:
@@ -105,8 +110,7 @@ def shard_values(cases: Cases, chosen: range, done: Progressed, folder: Path) ->
     return {
         "n_cases": len(cases),
         "shard_cases": len(chosen),
-        "computed": done.computed,
-        "found": done.found,
+        **_counts(done),
         "not_ok": [{"case": k, "reason": reason} for k, reason in done.not_ok.items()],
         "folder": str(folder),
     }

@@ -15,7 +15,7 @@ import numpy as np
 import pytest
 
 import levelnet
-from levelnet.errors import InputError, Outcome
+from levelnet.errors import InputError, Outcome, SolveError
 from levelnet.history.result import HISTORY_ARRAYS
 from levelnet.history.run import solve
 from levelnet.history.setup import parse_setup
@@ -111,7 +111,7 @@ def test_a_result_that_is_not_ok_is_kept_with_its_reason() -> None:
 def test_a_rerun_does_only_what_is_missing(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
     cases, folder = small_cases(), ResultFolder(tmp_path / "cases")
     first = compute_missing(cases, [0, 4], folder, optical_depth_to=(1000.0,))
-    assert first == (0, 2, {4: Outcome.STEP_LIMIT.value})
+    assert first == (0, 2, {4: Outcome.STEP_LIMIT.value}, 0)
     done: list[str] = []
     real = engine.compute_case
 
@@ -208,7 +208,7 @@ def test_what_another_day_may_not_have_is_tried_again(
     assert found.outcome == ("FAILED",)
     assert found.reason == (reason,)
     assert found.redshift.shape == (0,)
-    assert compute_missing(cases, [0], kept) == (0, 1, {})
+    assert compute_missing(cases, [0], kept) == (0, 1, {}, 0)
 
 
 def test_no_memory_for_a_case_is_its_reason(monkeypatch: pytest.MonkeyPatch) -> None:
@@ -286,7 +286,46 @@ def test_an_answer_that_never_came_is_a_reason() -> None:
 
     done = compute_missing(cases, [0], kept, executor=Lost())
     assert done.not_ok == {0: "RuntimeError: the worker left"}
-    assert compute_missing(cases, [0], kept) == (0, 1, {})
+    assert (done.computed, done.unanswered) == (0, 1)
+    assert compute_missing(cases, [0], kept)[:3] == (0, 1, {})
+
+
+def test_cases_that_were_cancelled_are_not_computed() -> None:
+    setups = [small_setup(n, grid=GRID) for n in (4, 5, 6)]
+    cases, kept = Cases("", tuple(setups)), MemoryPieces()
+
+    class Left(Executor):
+        """It answers once; then its scheduler is gone, and it takes the rest back."""
+
+        def submit(self, task: Any, *given: Any, **named: Any) -> Future[Any]:
+            future: Future[Any] = Future()
+            if given[0] == setups[2]:
+                future.set_result(task(*given))
+            else:
+                future.cancel()
+                future.set_running_or_notify_cancel()
+            return future
+
+    with pytest.raises(SolveError, match="of the 3 cases that were missing are computed and kept"):
+        compute_missing(cases, [0, 1, 2], kept, executor=Left())
+    with pytest.raises(Missing):
+        gather(cases, kept)
+
+
+def test_one_who_waits_is_told_now_and_then(monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setattr(jobs, "_LOOK_S", 0.01)
+
+    class Silent(Executor):
+        def submit(self, *given: Any, **named: Any) -> Future[Any]:
+            return Future()
+
+    def impatient(stage: str, fraction: float) -> None:
+        if stage == "cases":
+            raise SolveError("no workers")
+
+    cases = Cases("", (small_setup(4, grid=GRID),))
+    with pytest.raises(SolveError, match="no workers; 0 of the 1 cases"):
+        compute_missing(cases, [0], MemoryPieces(), executor=Silent(), progress=impatient)
 
 
 def test_a_sweep_without_cases_is_refused() -> None:
