@@ -117,12 +117,12 @@ def run(options: argparse.Namespace, console: Console) -> int:
     target = options.output or Path(f"{options.sweep.stem}.h5")
     chosen = _chosen(cases, options)
     check_folder(folder)
-    workers = 1 if options.scheduler else worker_count(options.jobs)
+    workers = 1 if options.scheduler else worker_count(options.jobs, "--jobs")
     finished = ResultFolder(folder)
-    if options.plan:
-        return _print_plan(cases, chosen, workers, finished, options)
     if options.shard is None:
         check_target(target, options.force, options.sweep)
+    if options.plan:
+        return _print_plan(cases, chosen, workers, finished, options)
     start, done = time.monotonic(), None
     if not options.merge:
         done = _computed(cases, chosen, workers, finished, options, console)
@@ -163,7 +163,7 @@ def _chosen(cases: Cases, options: argparse.Namespace) -> range:
 
     if options.shard is None:
         return range(len(cases))
-    match = re.fullmatch(r"(\d{1,9})/(\d{1,9})", options.shard, re.ASCII)
+    match = re.fullmatch(r"(\d{1,18})/(\d{1,18})", options.shard, re.ASCII)
     if match is None:
         raise InputError(f"--shard {options.shard}: write the number and the count, such as 3/16")
     return shard_of(len(cases), int(match[1]), int(match[2]))

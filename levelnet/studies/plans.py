@@ -109,6 +109,7 @@ def plan_levels(
 ) -> Plan:
     """A study of levels: every rung, and the two shortest once more."""
     jobs, coarse = ladder_jobs(study_setup(setup, also_at), rungs, resolve, atom)
+    check_memory(jobs[len(rungs) - 1], workers)
     every = [*jobs, *coarse]
     costs = [estimate(one, POPULATION_REDSHIFTS) for one in every]
     return _about(setup, make_plan(f"ladder of setup {setup.digest}", every, costs, workers))
@@ -120,6 +121,8 @@ def plan_escape(
     """A study of the escape by one plan or both; the variants of each share a reduced network."""
     on_grid = study_setup(setup, also_at)
     each = [plan_costs(on_grid, plan) for plan in plans]
+    for plan, (variants, _) in zip(plans, each, strict=True):
+        check_memory(variants[plan.reference], workers)
     first = sum(costs[plan.base].seconds for plan, (_, costs) in zip(plans, each, strict=True))
     setups = [one for of_plan, _ in each for one in of_plan]
     costs = [one for _, of_plan in each for one in of_plan]

@@ -18,7 +18,7 @@ from ..history.setup import Setup
 from ..pieces import MemoryPieces, Pieces, array_text
 from ..quantities import OBSERVABLES, at_redshift
 from .jobs import run_each
-from .sweep_cases import Cases
+from .sweep_cases import MOST_CASES, Cases
 from .sweep_record import Sweep
 from .sweep_run import CaseResult, case_key, compute_case, failure, packed, unpacked
 
@@ -116,8 +116,11 @@ def sweep(
 
 def shard_of(count: int, number: int, shards: int) -> range:
     """Positions of the cases of shard `number` (from 1) of `shards`: every shards-th one."""
+    where = f"shard {number}/{shards}"
+    if not 1 <= shards <= MOST_CASES:
+        raise InputError(f"{where}: the count of shards must be 1 to {MOST_CASES}")
     if not 1 <= number <= shards:
-        raise InputError(f"shard {number}/{shards}: the number must be 1 to {shards}")
+        raise InputError(f"{where}: the number must be 1 to {shards}")
     return range(number - 1, count, shards)
 
 

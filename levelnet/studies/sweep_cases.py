@@ -16,6 +16,8 @@ from ..history.setup import Setup
 from ..records import Complaints, attempt
 
 MOST_CASES = 1_000_000
+RANGE = frozenset({"from", "to", "count", "spacing"})
+"""Keys of a range of numbers."""
 _MOST_COMPLAINTS = 20
 _LONGEST = 40  # characters of a value that a label repeats
 
@@ -207,7 +209,12 @@ def _text(value: Any) -> str:
 def flat(table: Mapping[str, Any], start: str = "") -> Iterator[tuple[str, Any]]:
     """Dotted keys of nested tables with their values; ranges, which are tables too, are values."""
     for key, value in table.items():
-        if isinstance(value, Mapping) and not {"from", "to"} <= set(value):
+        if isinstance(value, Mapping) and not _is_range(value):
             yield from flat(value, f"{start}{key}.")
         else:
             yield f"{start}{key}", value
+
+
+def _is_range(table: Mapping[str, Any]) -> bool:
+    """Whether a table is meant as a range, whole or not: a nested one has only lists and tables."""
+    return any(key in RANGE and not isinstance(table[key], list | Mapping) for key in table)

@@ -12,11 +12,10 @@ from typing import Any
 
 from ..errors import InputError
 from ..texts import read_text
-from .sweep_cases import MOST_CASES, Cases, flat, make_cases, varied
+from .sweep_cases import MOST_CASES, RANGE, Cases, flat, make_cases, varied
 
 _MOST_BYTES = 256_000_000  # a million rows of CSV
 _TABLES = ("setup", "combine", "together", "title")
-_RANGE = {"from", "to", "count", "spacing"}
 _SPACINGS = ("even", "logarithmic")
 
 
@@ -27,10 +26,10 @@ def load_sweep(path: str | Path, setup: str | Path | None = None) -> Cases:
     ----------
     path : str or Path
         A CSV file, if its name ends in ``.csv``: a header of dotted keys of a setup, then one row
-        for each case; an empty cell leaves its key out. Else a TOML file: the table ``setup`` (or
-        the name of a setup file, relative to the current directory), and ``combine`` or
-        ``together`` with lists of values, or ranges ``{ from, to, count, spacing }``, by dotted
-        keys.
+        for each case; an empty cell leaves its key to `setup`, or out. Else a TOML file: the table
+        ``setup`` (or the name of a setup file, relative to the folder of this one), and
+        ``combine`` or ``together`` with lists of values, or ranges ``{ from, to, count, spacing
+        }``, by dotted keys.
     setup : str or Path, optional
         A setup file with what the rows of a CSV file have in common.
 
@@ -71,7 +70,7 @@ def _from_toml(where: str, text: str) -> Cases:
         raise InputError(f"{where}: {', '.join(unknown)}: unknown key; allowed are {known}")
     base, title = given.get("setup"), given.get("title", "")
     if isinstance(base, str):
-        base = _tables(base)
+        base = _tables(Path(where).parent / base)
     if not isinstance(base, dict):
         raise InputError(f"{where}: setup: a table, or the name of a setup file, is needed")
     if not isinstance(title, str):
@@ -99,8 +98,10 @@ def _values(given: Any) -> list[Any]:
         return given
     if not isinstance(given, Mapping):
         raise ValueError("a list of values is needed, or { from = , to = , count = }")
-    if unknown := sorted(set(given) - _RANGE):
+    if unknown := sorted(set(given) - RANGE):
         raise ValueError(f"{unknown[0]}: unknown key; allowed are from, to, count, spacing")
+    if missing := [key for key in ("from", "to") if key not in given]:
+        raise ValueError(f"{missing[0]}: missing; a range is {{ from = , to = , count = }}")
     low, high, count = given["from"], given["to"], given.get("count")
     spacing = given.get("spacing", "even")
     if not all(isinstance(one, int | float) and math.isfinite(one) for one in (low, high)):
@@ -146,17 +147,30 @@ def _from_csv(where: str, text: str, base: Mapping[str, Any]) -> Cases:
     if wrong:
         more = f"; and {len(wrong) - 20} more" if len(wrong) > 20 else ""
         raise InputError(f"{where}: {'; '.join(wrong[:20])}{more}")
+    common = {key: _value_at(base, key) for key in header}
     given = [
-        (f"row {k}", {key: _cell(cell) for key, cell in zip(header, row, strict=True)})
+        (
+            f"row {k}",
+            {
+                key: _cell(cell) if cell else common[key]
+                for key, cell in zip(header, row, strict=True)
+            },
+        )
         for k, row in enumerate(body, 1)
     ]
     return make_cases(where, base, given, str(base.get("title", "")))
 
 
+def _value_at(table: Mapping[str, Any], key: str) -> Any:
+    """What nested tables have under a dotted key; None where that is nothing, or a table."""
+    found: Any = table
+    for part in key.split("."):
+        found = found.get(part) if isinstance(found, Mapping) else None
+    return None if isinstance(found, Mapping) else found
+
+
 def _cell(text: str) -> Any:
-    """Read a cell: a value as TOML writes it, else the text itself; None where it is empty."""
-    if not text:
-        return None
+    """Read a cell: a value as TOML writes it, else the text itself."""
     try:
         found = tomllib.loads(f"x = {text}")
     except (ValueError, RecursionError):

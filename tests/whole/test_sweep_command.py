@@ -105,7 +105,12 @@ def test_plan_says_what_is_left_and_writes_nothing(
         (("--shard", "0/3"), "shard 0/3: the number must be 1 to 3"),
         (("--shard", "x"), "--shard x: write the number and the count, such as 3/16"),
         (("--shard", "1/2", "--merge"), "not allowed with argument"),
-        (("--jobs", "0"), "--workers = 0: allowed are 1 to 1024"),
+        (("--jobs", "0"), "--jobs = 0: allowed are 1 to 1024"),
+        (("--shard", "1/0"), "shard 1/0: the count of shards must be 1 to 1000000"),
+        (
+            ("--shard", "1/1000000000000"),
+            "shard 1/1000000000000: the count of shards must be 1 to 1000000",
+        ),
         (("--depth-to", "-1"), "--depth-to -1: allowed are redshifts above 0, to 10000"),
         (("--setup", "sweep.toml"), "--setup goes with CSV files only"),
         (("--output", "sweep.toml", "--force"), "is the file that is read"),
