@@ -85,6 +85,11 @@ def test_plan_says_what_is_left_and_writes_nothing(
     capsys.readouterr()
     assert run("--plan") == 0
     assert "sweep of 3 cases, 1 of them there already, is valid" in capsys.readouterr().out
+    for target in ("missing/x.h5", "sweep.toml"):
+        assert run("--plan", "--output", target) == 2
+    (folder / "sweep.h5").write_text("mine")
+    assert run("--plan") == 2
+    (folder / "sweep.h5").unlink()
     assert run("--shard", "4/4") == 0  # a shard may have nothing to do
     (folder / "sweep.toml").write_text(SWEEP.replace("[4, 5, 4]", "[4, 900, 4]"))
     with pytest.MonkeyPatch.context() as patch:
