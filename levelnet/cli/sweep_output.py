@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 from collections import Counter
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -32,6 +33,7 @@ def sweep_values(sweep: Sweep, done: Progressed | None = None) -> dict[str, Any]
         ],
         "observables": {name: sweep[name] for name in sweep.observable_names},
         "observable_units": dict(zip(sweep.observable_names, sweep.observable_units, strict=True)),
+        "notes": [{"cases": list(cases), "note": text} for text, cases in sweep.notes().items()],
         **({} if done is None else _counts(done)),
     }
 
@@ -48,7 +50,26 @@ def sweep_summary(sweep: Sweep, done: Progressed | None = None) -> str:
     ]
     labels = {k: sweep.label(k) for k in sweep.not_ok[:_SHOWN]}
     bad = [(labels[k], sweep.reason[k]) for k in labels]
-    return "\n".join([*lines, *_not_ok(bad, len(sweep.not_ok))])
+    return "\n".join([*lines, *_notes(sweep), *_not_ok(bad, len(sweep.not_ok))])
+
+
+def _notes(sweep: Sweep) -> list[str]:
+    """What cases that are ok do not reach."""
+    found = sweep.notes()
+    lines = [
+        row("note", f"{_whose(sweep, cases)}: {text}")
+        for text, cases in itertools.islice(found.items(), _SHOWN)
+    ]
+    if len(found) > _SHOWN:
+        lines.append(row("", f"and {len(found) - _SHOWN} more"))
+    return ["", *lines] if lines else []
+
+
+def _whose(sweep: Sweep, cases: tuple[int, ...]) -> str:
+    if len(cases) == len(sweep):
+        return "every case"
+    more = f" and {len(cases) - 1} more" if len(cases) > 1 else ""
+    return f"{sweep.label(cases[0])}{more}"
 
 
 def _counted(outcomes: Sequence[str]) -> str:

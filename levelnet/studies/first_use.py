@@ -42,7 +42,7 @@ class Part(NamedTuple):
 _HYDROGEN = Part("hydrogen", solve_blocks, 13.4, 1.0e8)
 _HELIUM = Part("helium", follow, 5.2, 0.5e8)
 _TRANSFER = Part("transfer", march, 22.8, 1.3e8)
-_TABLES = Part("tables", effective_history, 17.0, 2.0e8)
+_TABLES = Part("tables", effective_history, 25.8, 1.1e8)
 _HELIUM_TABLES = Part("tables with helium", plasma_history, 49.0, 3.0e8)
 
 

@@ -15,7 +15,7 @@ from ..history.cost import estimate
 from ..history.integrate import Progress
 from ..history.result import HISTORY_ARRAYS
 from ..history.setup import Setup
-from ..pieces import MemoryPieces, Pieces, array_text
+from ..pieces import MemoryPieces, Pieces
 from ..quantities import OBSERVABLES, at_redshift
 from .jobs import run_each
 from .sweep_cases import MOST_CASES, Cases
@@ -147,7 +147,6 @@ def compute_missing(
     results = {key: unpacked(finished.get(key)) for key in wanted}
     # One that failed for want of memory, say, is tried again.
     missing = [key for key, one in results.items() if one is None or not one.lasting]
-    reasons = {key: one.reason for key, one in results.items() if one is not None}
     setups = [cases.setups[wanted[key]] for key in missing]
     answered = 0
     task = partial(compute_case, pieces=pieces, optical_depth_to=optical_depth_to)
@@ -156,14 +155,15 @@ def compute_missing(
         for k, found in computed:
             piece = packed(_lost(found)) if isinstance(found, Exception) else found
             finished.put(missing[k], piece)
-            reasons[missing[k]] = array_text(piece["reason"])
+            results[missing[k]] = unpacked(piece)
             answered += not isinstance(found, Exception)
     except SolveError as error:
         raise SolveError(
             f"{error}; {answered} of the {len(missing)} cases that were missing are computed and "
             "kept, a rerun does the others"
         ) from error
-    bad = {k: reasons[key] for k, key in keys.items() if reasons[key]}
+    ends = {k: results[key] for k, key in keys.items()}
+    bad = {k: one.reason for k, one in ends.items() if one is not None and not one.ok}
     return Progressed(len(wanted) - len(missing), answered, bad, len(missing) - answered)
 
 

@@ -15,6 +15,7 @@ import numpy as np
 import pytest
 
 import levelnet
+from levelnet.cli.sweep_output import sweep_summary, sweep_values
 from levelnet.errors import InputError, Outcome, SolveError
 from levelnet.history.result import HISTORY_ARRAYS
 from levelnet.history.run import solve
@@ -106,6 +107,42 @@ def test_a_result_that_is_not_ok_is_kept_with_its_reason() -> None:
     # Nothing joins hydrogen to its ground state: that will not change, and is not tried again.
     assert "no channel to the ground state" in found.reason[1]
     assert compute_missing(Cases("", (good, neither)), range(2), kept)[:2] == (2, 0)
+
+
+def test_what_a_good_case_does_not_reach_is_told_with_the_reason() -> None:
+    wide = {"redshift_start": 1500.0, "redshift_end": 200.0, "n_redshifts": 9}
+    cases = vary(
+        small_setup(4, grid=wide),
+        together={
+            "cosmology.helium_mass_fraction": [0.245, 0.9999, 0.245, 0.245],
+            "cosmology.baryon_density_h2": [0.0224, 0.0224, 1e-12, 0.0224],
+            "grid.redshift_end": [200.0, 200.0, 200.0, 1200.0],
+        },
+    )
+    kept = MemoryPieces()
+    done = compute_missing(cases, range(4), kept, optical_depth_to=(300.0,))
+    found = gather(cases, kept, (300.0,))
+    assert done.not_ok == {} and found.not_ok == () and found.reason[0] == ""
+    for k in range(4):
+        missing = [n for n in found.observable_names if np.isnan(found[n][k])]
+        assert bool(missing) == bool(found.reason[k])
+        assert all(name in found.reason[k] for name in missing)
+    for k in (1, 2):
+        # tau over the grid, by what the case itself delivers from its start at z = 1500.
+        depth = found.arrays["optical_depth"][k, 0]
+        assert np.isnan(found["last_scattering_redshift"][k]) and 0.0 < depth < 1.0
+        assert (
+            "last_scattering_redshift, last_scattering_time_s, sound_horizon_mpc"
+            in (found.reason[k])
+        )
+        assert "the depth comes to " in found.reason[k] and ", not to 1" in found.reason[k]
+    assert "at the lowest redshift, 1200, x_e is 0.3" in found.reason[3]
+    assert "optical_depth(300) not reached: that redshift is outside the grid" in found.reason[3]
+    assert list(found.notes().values()) == [(1,), (2,), (3,)]
+    text = sweep_summary(found)
+    assert "note                  case 1 (cosmology.helium_mass_fraction = 0.9999" in text
+    assert "not ok" not in text
+    assert [one["cases"] for one in sweep_values(found)["notes"]] == [[1], [2], [3]]
 
 
 def test_a_rerun_does_only_what_is_missing(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
