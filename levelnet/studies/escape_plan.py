@@ -8,7 +8,7 @@ from collections.abc import Callable, Iterable
 from typing import Literal, NamedTuple
 
 from ..errors import InputError
-from ..escape.frequency_step import coarsest_step
+from ..escape.frequency_step import coarsest_step, fitted_step, highest_line
 from ..escape.lines import COARSEST_STEP, Lines, Transfer
 from ..history.setup import Setup
 
@@ -210,6 +210,14 @@ def _check_step(setup: Setup) -> None:
             f"lines.transfer.frequency_step = {setup.frequency_step:g}: the study also runs cells "
             "twice as wide to tell its error, so that at accuracy.relative = "
             f"{setup.accuracy.relative:g} it allows up to {math.floor(most * 1e6) / 1e6:g}"
+        )
+    # And these on a grid twice as coarse once more, as every field is.
+    apart = highest_line(fitted_step(4.0 * setup.frequency_step)) - 1
+    if setup.atom_size.lyman_lines > apart:
+        raise InputError(
+            f"lines.transfer.frequency_step = {setup.frequency_step:g}: the study also runs cells "
+            f"twice as wide to tell its error, which tell {apart} Lyman lines apart, and "
+            f"lines.lyman_lines = {setup.atom_size.lyman_lines}"
         )
 
 

@@ -43,7 +43,7 @@ _HYDROGEN = Part("hydrogen", solve_blocks, 13.4, 1.0e8)
 _HELIUM = Part("helium", follow, 5.2, 0.5e8)
 _TRANSFER = Part("transfer", march, 22.8, 1.3e8)
 _TABLES = Part("tables", effective_history, 25.8, 1.1e8)
-_HELIUM_TABLES = Part("tables with helium", plasma_history, 49.0, 3.0e8)
+_HELIUM_TABLES = Part("tables with helium", plasma_history, 69.5, 4.0e8)
 
 
 class FirstUse(NamedTuple):
@@ -94,7 +94,7 @@ def _parts(setups: Sequence[Setup], tables: bool) -> list[Part]:
         _HYDROGEN: True,
         _HELIUM: helium,
         _TRANSFER: any(one.lines.transfer is not None for one in setups),
-        _TABLES: tables,
+        _TABLES: tables and not helium,
         _HELIUM_TABLES: tables and helium,
     }
     return [one for one, is_needed in needed.items() if is_needed]

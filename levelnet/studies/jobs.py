@@ -168,7 +168,9 @@ def _through(
             for future in done:
                 k, found = running.pop(future), _tried(Future.result, future)
                 if isinstance(found, CancelledError):
-                    raise ExecutorLost("jobs were cancelled by the executor that had them")
+                    raise ExecutorLost(
+                        "jobs were cancelled: the scheduler or the pool that had them is gone"
+                    )
                 if isinstance(found, BrokenExecutor):
                     broken = True
                     suspects.append(k)

@@ -187,7 +187,7 @@ def test_a_damaged_case_is_computed_again(tmp_path: Path) -> None:
     files[2].write_bytes(bytes(data))
     with pytest.raises(Missing, match="1 of 5 cases are not computed yet, the first is case"):
         gather(cases, folder, (1000.0,))
-    found, computed, _ = compute_missing(cases, range(5), folder, optical_depth_to=(1000.0,))
+    found, computed, *_ = compute_missing(cases, range(5), folder, optical_depth_to=(1000.0,))
     assert (found, computed) == (4, 1)
     assert same_bits(gather(cases, folder, (1000.0,)), plain())
 

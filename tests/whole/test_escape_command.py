@@ -162,6 +162,16 @@ PLAIN = GOOD.replace("n_max = 4", "n_max = 8")
             "lines.transfer.frequency_step = 0.0011: the study also runs cells twice as wide to "
             "tell its error, so that at accuracy.relative = 1e-05 it allows up to 0.001",
         ),
+        (
+            (
+                "[grid]",
+                "[accuracy]\nrelative = 1e-4\n"
+                + FIELD.format(1e-3).replace("[lines]\n", "[lines]\nlyman_lines = 5\n")
+                + "[grid]",
+            ),
+            "lines.transfer.frequency_step = 0.001: the study also runs cells twice as wide to "
+            "tell its error, which tell 4 Lyman lines apart, and lines.lyman_lines = 5",
+        ),
     ],
 )
 def test_setup_that_does_not_go_with_the_reference(

@@ -88,7 +88,8 @@ def test_a_scheduler_that_dies_half_way_ends_with_a_clear_line(tmp_path: Path) -
          "--scheduler-file", "address"],
         **quiet,
     )  # fmt: skip
-    while not (tmp_path / "address").exists():
+    give_up = time.monotonic() + 120.0
+    while not (tmp_path / "address").exists() and time.monotonic() < give_up:
         time.sleep(0.1)
     address = json.loads((tmp_path / "address").read_text())["address"]
     worker = subprocess.Popen([*dask, "worker", address, "--nthreads", "1", "--no-nanny"], **quiet)
@@ -98,7 +99,8 @@ def test_a_scheduler_that_dies_half_way_ends_with_a_clear_line(tmp_path: Path) -
             cwd=tmp_path, env=environment(), text=True,
             stdout=subprocess.PIPE, stderr=subprocess.PIPE,
         )  # fmt: skip
-        while len(list((tmp_path / "cases").glob("*.piece"))) < 2 and command.poll() is None:
+        give_up = time.monotonic() + 240.0
+        while len(list((tmp_path / "cases").glob("*.piece"))) < 2 and time.monotonic() < give_up:
             time.sleep(0.05)
         scheduler.kill()
         out, error = command.communicate(timeout=120.0)
