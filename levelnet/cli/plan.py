@@ -47,7 +47,7 @@ def print_plan(plan: Plan, as_json: bool) -> int:
     if plan.first_use_of:
         what = ", ".join(plan.first_use_of)
         seconds = time_text(plan.first_use_s)
-        print(row("first use", f"on this machine: about {seconds} of compilation ({what}), in it"))
+        print(row("of it first use", f"on this machine: about {seconds} of compilation ({what})"))
     if plan.workers > 1:
         print(row("on one processor", time_text(plan.processor_seconds)))
     return 0

@@ -149,7 +149,7 @@ def _write_all(folder: Path, contents: dict[Path, bytes]) -> None:
     made = _make_folder(folder)
     try:
         with tempfile.TemporaryDirectory(prefix=".levelnet-", dir=folder) as room:
-            new = {path: Path(room) / path.name for path in contents}
+            new = {path: Path(room) / f"{path.name}.part" for path in contents}
             for path, data in contents.items():
                 _write_bytes(new[path], data, path)
             for path, place in new.items():

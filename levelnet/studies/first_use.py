@@ -25,8 +25,8 @@ class Part(NamedTuple):
         One of them, which calls others or comes after them.
     seconds : float, s
         CPU time of their compilation.
-    memory_bytes : float
-        Memory that the compiler takes besides the run.
+    memory_bytes : float, bytes
+        Memory that it takes besides that of the run.
     """
 
     name: str
@@ -35,15 +35,16 @@ class Part(NamedTuple):
     memory_bytes: float
 
 
-# Measured once each from an empty cache, one after the other in this order, with numba 0.68 on one
-# core of a loaded 2 GHz-class x86-64 server: CPU time within the compiler (of hydrogen, a cold run
-# of `solve` less a warm one), and growth of the largest memory of the process. n_max = 5, and 3 of
-# helium.
-_HYDROGEN = Part("hydrogen", solve_blocks, 13.4, 1.0e8)
-_HELIUM = Part("helium", follow, 5.2, 0.5e8)
-_TRANSFER = Part("transfer", march, 22.8, 1.3e8)
-_TABLES = Part("tables", effective_history, 25.8, 1.1e8)
-_HELIUM_TABLES = Part("tables with helium", plasma_history, 69.5, 4.0e8)
+# Measured once each with numba 0.68 on one core of a 2 GHz-class x86-64 server under load, n_max
+# = 5, and 3 of helium: CPU time, and largest memory, of a run from an empty cache less those of the same
+# run with all kept. `solve` took 10.6 s and 94 MB, with helium 13.0 s and 111 MB, with a resolved
+# field 21.3 s and 177 MB; `distill` 30.1 s and 210 MB, with helium 79.3 s and 850 MB. What a part
+# takes is what it adds. On a busier machine the compiler took up to twice the CPU time.
+_HYDROGEN = Part("hydrogen", solve_blocks, 10.6, 9.4e7)
+_HELIUM = Part("helium", follow, 2.4, 1.7e7)
+_TRANSFER = Part("transfer", march, 10.7, 8.3e7)
+_TABLES = Part("tables", effective_history, 19.5, 1.16e8)
+_HELIUM_TABLES = Part("tables with helium", plasma_history, 66.3, 7.4e8)
 
 
 class FirstUse(NamedTuple):

@@ -166,7 +166,7 @@ def test_plan_prints_or_refuses_and_writes_nothing(
     assert 0.0 < plan["seconds"] <= plan["processor_seconds"]
     monkeypatch.setattr(first_use, "is_kept", lambda kernel: False)
     assert main(words) == 0
-    assert "first use             on this machine: about" in capsys.readouterr().out
+    assert "of it first use       on this machine: about" in capsys.readouterr().out
     monkeypatch.setattr(cost, "available_memory_bytes", lambda: 3.2e8)
     assert main(words) == 2
     refused = capsys.readouterr()
