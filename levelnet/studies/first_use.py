@@ -35,11 +35,11 @@ class Part(NamedTuple):
     memory_bytes: float
 
 
-# Measured once each with numba 0.68 on one core of a 2 GHz-class x86-64 server under load, n_max
-# = 5, and 3 of helium: CPU time, and largest memory, of a run from an empty cache less those of the same
-# run with all kept. `solve` took 10.6 s and 94 MB, with helium 13.0 s and 111 MB, with a resolved
-# field 21.3 s and 177 MB; `distill` 30.1 s and 210 MB, with helium 79.3 s and 850 MB. What a part
-# takes is what it adds. On a busier machine the compiler took up to twice the CPU time.
+# Measured once each with numba 0.68 on one core of a 2 GHz-class x86-64 server under load, with
+# n_max = 5, and 3 of helium: CPU time, and largest memory, of a run from an empty cache less those
+# of the same run with all kept. `solve` took 10.6 s and 94 MB, with helium 13.0 s and 111 MB, with
+# a resolved field 21.3 s and 177 MB; `distill` 30.1 s and 210 MB, with helium 79.3 s and 850 MB.
+# What a part takes is what it adds. On a busier machine the compiler took up to twice the CPU time.
 _HYDROGEN = Part("hydrogen", solve_blocks, 10.6, 9.4e7)
 _HELIUM = Part("helium", follow, 2.4, 1.7e7)
 _TRANSFER = Part("transfer", march, 10.7, 8.3e7)
