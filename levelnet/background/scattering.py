@@ -131,9 +131,10 @@ class Scattering:
     def why_no_depth(self, row: int) -> str:
         """Why the depth of an integrand reaches 1 nowhere; "" where it does."""
         most = float(self.grid.to_end(self.late(row))[0])
+        name = "drag depth" if row == DRAG else "optical depth"
         low, high = (math.expm1(-float(self.grid.edges[k])) for k in (-1, 0))
         if not most > 1.0:
-            return f"from z = {low:.4g} up to {high:.4g} the depth comes to {most:.3g}, not to 1"
+            return f"from z = {low:.4g} up to {high:.4g} the {name} comes to {most:.3g}, not to 1"
         if self.last_fraction >= _LITTLE:
             return (
                 f"at the lowest redshift, {low:.4g}, x_e is {self.last_fraction:.2g}; end the grid "

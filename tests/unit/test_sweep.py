@@ -135,7 +135,7 @@ def test_what_a_good_case_does_not_reach_is_told_with_the_reason() -> None:
             "last_scattering_redshift, last_scattering_time_s, sound_horizon_mpc"
             in (found.reason[k])
         )
-        assert "the depth comes to " in found.reason[k] and ", not to 1" in found.reason[k]
+        assert "the optical depth comes to " in found.reason[k] and ", not to 1" in found.reason[k]
     assert "at the lowest redshift, 1200, x_e is 0.3" in found.reason[3]
     assert "optical_depth(300) not reached: that redshift is outside the grid" in found.reason[3]
     assert list(found.notes().values()) == [(1,), (2,), (3,)]
