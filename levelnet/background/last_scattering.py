@@ -44,7 +44,7 @@ from .parameters import (
     loading_derivatives,
 )
 from .quadrature import Quadrature
-from .scattering import DAMPING, DEPTH, SOUND, TIME, Event, Found, Scattering
+from .scattering import DAMPING, DEPTH, DRAG, SOUND, TIME, Event, Found, Scattering
 
 # T_r from which integrals over a history may start: 1.4e-8 of hydrogen is neutral there.
 _IONIZED_K = 7000.0
@@ -69,6 +69,8 @@ class Observed:
         By each of `COSMOLOGICAL`, per unit of each, at fixed x_e(s).
     by_thomson : ndarray, shape (n_observables,)
         By ln sigma_T, at fixed x_e(s).
+    missing : tuple of str, length n_observables
+        Why the history does not reach the event; "" where it does.
     """
 
     names: tuple[str, ...]
@@ -77,6 +79,7 @@ class Observed:
     gradient: FloatArray
     by_parameter: FloatArray
     by_thomson: FloatArray
+    missing: tuple[str, ...]
 
     def __post_init__(self) -> None:
         """Check shapes and make every array read-only."""
@@ -156,7 +159,20 @@ def observe(
         change[:, 0, seen.n_early :],
         by_parameter,
         by_opacity,
+        tuple(
+            _why_missing(seen, name) if one is None else ""
+            for name, one in zip((*names, *depths), found, strict=True)
+        ),
     )
+
+
+def _why_missing(seen: Scattering, name: str) -> str:
+    """Why a history does not reach an event."""
+    if name in _VISIBLE:
+        return seen.why_no_width()
+    if name in OBSERVABLES:
+        return seen.why_no_depth(DRAG if name in _OF_DRAG else DEPTH)
+    return "that redshift is outside the grid"
 
 
 def _redshift(seen: Scattering, event: Event | None) -> Found | None:
@@ -206,6 +222,8 @@ def _optical_depth(seen: Scattering, redshift: float) -> Found | None:
     return float(seen.value[DEPTH] @ weight), seen.change(DEPTH, weight)
 
 
+_VISIBLE = ("visibility_peak_redshift", "visibility_width")
+_OF_DRAG = ("drag_redshift", "drag_horizon_mpc")
 _MAKERS: dict[str, Callable[[Scattering], Found | None]] = {
     "last_scattering_redshift": lambda seen: _redshift(seen, seen.last),
     "visibility_peak_redshift": lambda seen: _redshift(seen, seen.peak),

@@ -128,6 +128,28 @@ class Scattering:
         now = float(self.value[row] @ self.at(place))
         return Event(place, self.change(row, self.after(place)) / now)
 
+    def why_no_depth(self, row: int) -> str:
+        """Why the depth of an integrand reaches 1 nowhere; "" where it does."""
+        most = float(self.grid.to_end(self.late(row))[0])
+        name = "drag depth" if row == DRAG else "optical depth"
+        low, high = (math.expm1(-float(self.grid.edges[k])) for k in (-1, 0))
+        if not most > 1.0:
+            return f"from z = {low:.4g} up to {high:.4g} the {name} comes to {most:.3g}, not to 1"
+        if self.last_fraction >= _LITTLE:
+            return (
+                f"at the lowest redshift, {low:.4g}, x_e is {self.last_fraction:.2g}; end the grid "
+                f"where it is below {_LITTLE:g}"
+            )
+        return ""
+
+    def why_no_width(self) -> str:
+        """Why g has no full width; "" where it has."""
+        if self.peak is None:
+            return "the visibility is largest at an end of the grid"
+        if self.half_maximum(self.peak) is None:
+            return "the visibility does not fall to half its maximum inside the grid"
+        return ""
+
     @cached_property
     def log_visibility(self) -> FloatArray:
         """Give ln g at the points, g in Mpc^-1."""

@@ -90,7 +90,7 @@ def run(options: argparse.Namespace, console: Console) -> int:
     kept = None if options.kept is None else kept_levels(options.kept)
     target = options.output or Path(f"{options.setup.stem}-table.h5")
     languages = tuple(dict.fromkeys(options.export or ()))
-    check_target(target, options.force or options.plan, options.setup)
+    check_target(target, options.force, options.setup)
     check_exports(target, languages, options.force)
     if languages:
         from ..distilled.kept import check_exported_setup
@@ -167,12 +167,12 @@ def kept_levels(text: str) -> tuple[tuple[int, int], ...]:
     return tuple(sorted(found))
 
 
-def worker_count(workers: int | None) -> int:
-    """How many worker processes are asked for; one for each core that may be used by default."""
+def worker_count(workers: int | None, option: str = "--workers") -> int:
+    """How many worker processes an option asks for; by default one for each core one may use."""
     count = len(os.sched_getaffinity(0)) if hasattr(os, "sched_getaffinity") else os.cpu_count()
     count = (count or 1) if workers is None else workers
     if not 1 <= count <= 1024:
-        raise InputError(f"--workers = {count}: allowed are 1 to 1024")
+        raise InputError(f"{option} = {count}: allowed are 1 to 1024")
     return count
 
 

@@ -64,7 +64,7 @@ def run(options: argparse.Namespace, console: Console) -> int:
     requirement = asked_requirement(options.requirement, setup)
     plans = _plans(setup, options)
     target = options.output or Path(f"{options.setup.stem}-escape.h5")
-    check_target(target, options.force or options.plan, options.setup)
+    check_target(target, options.force, options.setup)
     asked = () if requirement is None else tuple(requirement.to_toml().splitlines())
     questions = [
         Question(

@@ -70,7 +70,7 @@ def run(options: argparse.Namespace, console: Console) -> int:
     rungs = None if options.rungs is None else whole_numbers("--rungs", options.rungs)
     resolve = () if options.resolve is None else whole_numbers("--resolve", options.resolve)
     target = options.output or Path(f"{options.setup.stem}-levels.h5")
-    check_target(target, options.force or options.plan, options.setup)
+    check_target(target, options.force, options.setup)
     asked = () if requirement is None else tuple(requirement.to_toml().splitlines())
     question = Question(options.within, *asked_range(setup, options, options.atom), asked)
     ladder = _checked_ladder(setup, rungs, resolve, options)

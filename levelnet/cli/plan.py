@@ -34,6 +34,8 @@ def print_plan(plan: Plan, as_json: bool) -> int:
                 "available_bytes": plan.available_bytes,
                 "seconds": plan.seconds,
                 "processor_seconds": plan.processor_seconds,
+                "first_use_of": list(plan.first_use_of),
+                "first_use_seconds": plan.first_use_s,
             }
         )
         return 0
@@ -42,6 +44,10 @@ def print_plan(plan: Plan, as_json: bool) -> int:
     print(row("runs", f"{plan.runs}{by}"))
     print(row("memory", f"{size_text(plan.memory_bytes)} of {_available(plan)} available"))
     print(row("time", f"{time_text(plan.seconds)}, to a factor of two or three"))
+    if plan.first_use_of:
+        what = ", ".join(plan.first_use_of)
+        seconds = time_text(plan.first_use_s)
+        print(row("of it first use", f"on this machine: about {seconds} of compilation ({what})"))
     if plan.workers > 1:
         print(row("on one processor", time_text(plan.processor_seconds)))
     return 0

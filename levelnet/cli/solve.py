@@ -74,11 +74,11 @@ def run(options: argparse.Namespace, console: Console) -> int:
         setup = dataclasses.replace(setup, accuracy=accuracy)
     plain = without_overrides(setup) if options.compare_rates else None
     target = options.output or Path(f"{options.setup.stem}.h5")
+    check_target(target, options.force, options.setup)
     if options.plan:
         from ..studies.plans import plan_solve
 
         return print_plan(plan_solve(setup), options.json)
-    check_target(target, options.force, options.setup)
     history, seconds = compute(setup, console, cache=not options.no_cache)
     compared = None
     if plain is not None:

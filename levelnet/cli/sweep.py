@@ -7,9 +7,8 @@ import re
 import time
 from collections.abc import Iterator
 from contextlib import contextmanager
-from importlib import import_module
 from pathlib import Path
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING
 
 from ..errors import InputError, SolveError
 from .console import Console
@@ -17,12 +16,14 @@ from .distill import worker_count, worker_processes
 from .output import print_result
 from .paths import check_folder, check_target
 from .plan import add_plan, print_plan
+from .scheduler import check_address, dask_library, scheduler_workers
 from .solve import cache_pieces
 from .sweep_output import shard_summary, shard_values, sweep_summary, sweep_values
 
 if TYPE_CHECKING:
     from concurrent.futures import Executor
 
+    from ..history.integrate import Progress
     from ..pieces import ResultFolder
     from ..studies.sweep import Progressed
     from ..studies.sweep_cases import Cases
@@ -37,7 +38,6 @@ DESCRIPTION = (
     "does not stop the others."
 )
 EXAMPLE = "levelnet sweep sweep.toml --jobs 8 --output sweep.h5"
-_ANSWER_S = 30.0  # how long a scheduler may take to answer
 
 
 def add_arguments(parser: argparse.ArgumentParser) -> None:
@@ -109,17 +109,20 @@ def run(options: argparse.Namespace, console: Console) -> int:
     from ..pieces import ResultFolder
     from ..studies.sweep_files import load_sweep
 
+    if options.scheduler:
+        check_address(options.scheduler)
+        dask_library()
     cases = load_sweep(options.sweep, options.setup)
     folder = options.cases or Path(f"{options.sweep.stem}-cases")
     target = options.output or Path(f"{options.sweep.stem}.h5")
     chosen = _chosen(cases, options)
     check_folder(folder)
-    workers = 1 if options.scheduler else worker_count(options.jobs)
+    workers = 1 if options.scheduler else worker_count(options.jobs, "--jobs")
     finished = ResultFolder(folder)
-    if options.plan:
-        return _print_plan(cases, chosen, workers, finished, options)
     if options.shard is None:
         check_target(target, options.force, options.sweep)
+    if options.plan:
+        return _print_plan(cases, chosen, workers, finished, options)
     start, done = time.monotonic(), None
     if not options.merge:
         done = _computed(cases, chosen, workers, finished, options, console)
@@ -160,7 +163,7 @@ def _chosen(cases: Cases, options: argparse.Namespace) -> range:
 
     if options.shard is None:
         return range(len(cases))
-    match = re.fullmatch(r"(\d{1,9})/(\d{1,9})", options.shard, re.ASCII)
+    match = re.fullmatch(r"(\d{1,18})/(\d{1,18})", options.shard, re.ASCII)
     if match is None:
         raise InputError(f"--shard {options.shard}: write the number and the count, such as 3/16")
     return shard_of(len(cases), int(match[1]), int(match[2]))
@@ -189,17 +192,23 @@ def _computed(
     if not options.scheduler:
         check_sweep_memory(cases, chosen, workers)
     pieces = None if options.no_cache else cache_pieces(console)
-    with console.progress() as progress, _executor(options.scheduler, workers) as executor:
-        return compute_missing(
-            cases,
-            chosen,
-            finished,
-            optical_depth_to=depths,
-            executor=executor,
-            workers=workers,
-            pieces=pieces,
-            progress=progress,
-        )
+    try:
+        with (
+            console.progress() as progress,
+            _executor(options.scheduler, workers, console, progress) as (executor, told),
+        ):
+            return compute_missing(
+                cases,
+                chosen,
+                finished,
+                optical_depth_to=depths,
+                executor=executor,
+                workers=workers,
+                pieces=pieces,
+                progress=told,
+            )
+    except SolveError as error:
+        raise SolveError(f"{finished.folder}: {error}") from error
 
 
 def _gathered(cases: Cases, finished: ResultFolder, options: argparse.Namespace) -> Sweep:
@@ -213,26 +222,21 @@ def _gathered(cases: Cases, finished: ResultFolder, options: argparse.Namespace)
 
 
 @contextmanager
-def _executor(scheduler: str | None, workers: int) -> Iterator[Executor | None]:
-    """Who computes: this process, processes of its own, or the workers of a dask scheduler."""
+def _executor(
+    scheduler: str | None, workers: int, console: Console, progress: Progress
+) -> Iterator[tuple[Executor | None, Progress]]:
+    """Who computes (this process, its own, or a scheduler's workers), and who is told of it."""
     if scheduler is None:
         with worker_processes(workers) as executor:
-            yield executor
+            yield executor, progress
         return
-    try:
-        dask: Any = import_module("distributed")
-    except ImportError:
-        raise InputError(
-            "--scheduler: needs the library distributed: install levelnet[cluster]"
-        ) from None
-    try:
-        client = dask.Client(scheduler, timeout=_ANSWER_S, set_as_default=False)
-    except (OSError, ValueError, TypeError) as error:
-        raise InputError(
-            f"--scheduler {scheduler}: no scheduler answers there: {error or type(error).__name__}"
-        ) from None
-    with client:
-        yield client.get_executor(pure=False)
+    with scheduler_workers(scheduler, console) as (client, watch):
+
+        def told(stage: str, fraction: float) -> None:
+            watch()
+            progress(stage, fraction)
+
+        yield client, told
 
 
 def _print_plan(

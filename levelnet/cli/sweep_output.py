@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 from collections import Counter
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -32,7 +33,8 @@ def sweep_values(sweep: Sweep, done: Progressed | None = None) -> dict[str, Any]
         ],
         "observables": {name: sweep[name] for name in sweep.observable_names},
         "observable_units": dict(zip(sweep.observable_names, sweep.observable_units, strict=True)),
-        **({} if done is None else {"computed": done.computed, "found": done.found}),
+        "notes": [{"cases": list(cases), "note": text} for text, cases in sweep.notes().items()],
+        **({} if done is None else _counts(done)),
     }
 
 
@@ -48,7 +50,26 @@ def sweep_summary(sweep: Sweep, done: Progressed | None = None) -> str:
     ]
     labels = {k: sweep.label(k) for k in sweep.not_ok[:_SHOWN]}
     bad = [(labels[k], sweep.reason[k]) for k in labels]
-    return "\n".join([*lines, *_not_ok(bad, len(sweep.not_ok))])
+    return "\n".join([*lines, *_notes(sweep), *_not_ok(bad, len(sweep.not_ok))])
+
+
+def _notes(sweep: Sweep) -> list[str]:
+    """What cases that are ok do not reach."""
+    found = sweep.notes()
+    lines = [
+        row("note", f"{_whose(sweep, cases)}: {text}")
+        for text, cases in itertools.islice(found.items(), _SHOWN)
+    ]
+    if len(found) > _SHOWN:
+        lines.append(row("", f"and {len(found) - _SHOWN} more"))
+    return ["", *lines] if lines else []
+
+
+def _whose(sweep: Sweep, cases: tuple[int, ...]) -> str:
+    if len(cases) == len(sweep):
+        return "every case"
+    more = f" and {len(cases) - 1} more" if len(cases) > 1 else ""
+    return f"{sweep.label(cases[0])}{more}"
 
 
 def _counted(outcomes: Sequence[str]) -> str:
@@ -58,7 +79,12 @@ def _counted(outcomes: Sequence[str]) -> str:
 def _done(done: Progressed | None) -> list[str]:
     if done is None:
         return []
-    return [row("done now", f"{done.computed} computed, {done.found} were there")]
+    lost = f", {done.unanswered} without an answer" if done.unanswered else ""
+    return [row("done now", f"{done.computed} computed{lost}, {done.found} were there")]
+
+
+def _counts(done: Progressed) -> dict[str, int]:
+    return {"computed": done.computed, "found": done.found, "unanswered": done.unanswered}
 
 
 def _range(key: str, column: Sequence[Any]) -> str:
@@ -105,8 +131,7 @@ def shard_values(cases: Cases, chosen: range, done: Progressed, folder: Path) ->
     return {
         "n_cases": len(cases),
         "shard_cases": len(chosen),
-        "computed": done.computed,
-        "found": done.found,
+        **_counts(done),
         "not_ok": [{"case": k, "reason": reason} for k, reason in done.not_ok.items()],
         "folder": str(folder),
     }

@@ -19,6 +19,7 @@ from .weigh_values import weighing_values
 
 if TYPE_CHECKING:
     from ..history.setup import Setup
+    from ..studies.budget import Uncertainty
     from ..studies.weighing import Weighing
 
 NAME = "weigh"
@@ -92,13 +93,14 @@ def run(options: argparse.Namespace, console: Console) -> int:
     targets = tuple(dict.fromkeys(asked))
     band = tuple(band_targets(setup, _band(options)))
     _check_places(options, targets, (*targets, *band), setup.helium_recombines)
+    uncertainties = _checked_question(setup, (*targets, *band), options)
     if options.plan:
         from ..studies.plans import plan_weigh
 
         further = len(set(band) - set(targets))
         return print_plan(plan_weigh(setup, len(targets), further), options.json)
     start = time.monotonic()
-    weighing = _weighed(setup, targets, band, options, console)
+    weighing = _weighed(setup, targets, band, uncertainties, options, console)
     seconds = time.monotonic() - start
     written = _write(weighing, options, console)
     print_result(
@@ -134,7 +136,7 @@ def _check_places(
 ) -> None:
     """Refuse what cannot be written before any work starts."""
     if options.output is not None:
-        check_target(options.output, options.force or options.plan, options.setup)
+        check_target(options.output, options.force, options.setup)
     if options.plot is not None:
         from ..report.figures import check_free
         from ..report.weights import figure_paths
@@ -146,6 +148,17 @@ def _check_places(
         electrons = [name for name in every if parse_target(name).kind == "x_e"]
         band = not options.no_budget and len(electrons) > 1
         check_free(figure_paths(targets, band, options.plot, helium), options.force)
+
+
+def _checked_question(
+    setup: Setup, names: tuple[str, ...], options: argparse.Namespace
+) -> tuple[Uncertainty, ...]:
+    """Rows of the budget; refuse what cannot be weighed before any work starts."""
+    from ..studies.budget import uncertainties_in
+    from ..studies.weigh import check_weighable
+
+    check_weighable(setup, names)
+    return () if options.no_budget else uncertainties_in(setup, options.uncertainties)
 
 
 def default_targets(setup: Setup) -> list[str]:
@@ -178,16 +191,14 @@ def _weighed(
     setup: Setup,
     targets: tuple[str, ...],
     band: tuple[str, ...],
+    uncertainties: tuple[Uncertainty, ...],
     options: argparse.Namespace,
     console: Console,
 ) -> Weighing:
     """Weigh the targets, and budget their errors and those of the band."""
-    from ..studies.budget import uncertainties_in
     from ..studies.weigh import weigh
     from ..studies.weigh_budget import weigh_with_budget
 
-    if not options.no_budget:
-        uncertainties = uncertainties_in(setup, options.uncertainties)
     announce_cost(setup, console, _HISTORIES)
     pieces = None if options.no_cache else cache_pieces(console)
     with console.progress() as progress:

@@ -49,6 +49,16 @@ def kernel(function: Function) -> Function:
         _options.CACHE_DIR = own
 
 
+def is_kept(function: Callable[..., Any]) -> bool:
+    """Whether machine code of a kernel is on disk, for arguments of some kind."""
+    if not hasattr(
+        function, "py_func"
+    ):  # compilation is switched off: there is nothing to wait for
+        return True
+    files: Any = getattr(getattr(function, "_cache", None), "_cache_file", None)
+    return files is not None and bool(files._load_index())
+
+
 def inlined(function: Function) -> Function:
     """Make `function` part of every kernel that calls it, for small steps of many arguments.
 

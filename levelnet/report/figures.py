@@ -5,6 +5,7 @@ from __future__ import annotations
 import os
 import tempfile
 from collections.abc import Callable
+from contextlib import suppress
 from pathlib import Path
 from typing import TYPE_CHECKING
 
@@ -102,7 +103,7 @@ def save_figures(
     InputError
         If a file exists and `force` is not set, or `folder` is a file, or `redshift` is outside.
     OSError
-        If a file cannot be written; none is left half-written.
+        If a file cannot be written; then none is.
     """
     parts = history.field is not None, history.helium is not None
     check_place(folder, figure_paths(folder, *parts), force)
@@ -129,9 +130,7 @@ def save_drawn(
         if progress is not None:
             progress("drawing figures", count / len(paths))
         drawn.append(style.render(figures[path.stem], path.suffix[1:]))
-    Path(folder).mkdir(parents=True, exist_ok=True)
-    for path, data in zip(paths, drawn, strict=True):
-        _write_bytes(path, data)
+    _write_all(Path(folder), dict(zip(paths, drawn, strict=True)))
     return tuple(paths)
 
 
@@ -142,20 +141,41 @@ def check_free(paths: tuple[Path, ...], force: bool) -> None:
             raise InputError(f"{path}: exists already; --force (force=True) overwrites it")
 
 
-def _write_bytes(path: Path, data: bytes) -> None:
-    """Put `data` at `path` as a whole: a new file beside it is moved over it."""
-    handle, name = tempfile.mkstemp(prefix=f".{path.name}.", dir=path.parent)
+def _write_all(folder: Path, contents: dict[Path, bytes]) -> None:
+    """Put all files into `folder`, made where it is missing, or none: each is written, then moved.
+
+    A full disk shows while the new files are still beside those they are to replace.
+    """
+    made = _make_folder(folder)
     try:
-        with os.fdopen(handle, "wb") as stream:
+        with tempfile.TemporaryDirectory(prefix=".levelnet-", dir=folder) as room:
+            new = {path: Path(room) / f"{path.name}.part" for path in contents}
+            for path, data in contents.items():
+                _write_bytes(new[path], data, path)
+            for path, place in new.items():
+                place.replace(path)
+    except BaseException:
+        for one in made:
+            with suppress(OSError):  # not empty: another program uses it
+                one.rmdir()
+        raise
+
+
+def _make_folder(folder: Path) -> list[Path]:
+    """Make a folder; which ones had to be made, the innermost first."""
+    missing = [one for one in (folder, *folder.parents) if not one.exists()]
+    folder.mkdir(parents=True, exist_ok=True)
+    return missing
+
+
+def _write_bytes(place: Path, data: bytes, path: Path) -> None:
+    """Write a whole file, which will stand at `path`."""
+    try:
+        with place.open("xb") as stream:
             stream.write(data)
             stream.flush()
             os.fsync(stream.fileno())
-        umask = os.umask(0)
-        os.umask(umask)
-        Path(name).chmod(0o666 & ~umask)  # mkstemp makes files private; figures are for sharing
-        Path(name).replace(path)
-    except BaseException as error:
-        Path(name).unlink(missing_ok=True)
-        if isinstance(error, OSError) and error.filename is None:
+    except OSError as error:
+        if error.filename is None:
             error.filename = str(path)  # a full disk does not say where
         raise

@@ -65,7 +65,10 @@ def _group(swept: tuple[tuple[Kind, str], ...], shared: bool) -> Group:
             *(Variable(key, ("case",), "", f"{key} of the setup", "", kind) for kind, key in swept),
             by_case("setup", "whole setup as TOML"),
             by_case("outcome", "how the case ended: name of an Outcome, or FAILED"),
-            by_case("reason", "why there is no result to be used as it stands; empty where one is"),
+            by_case(
+                "reason",
+                "why there is no result to be used as it stands, or what it lacks; empty: nothing",
+            ),
             *outputs,
             Variable("observable", ("observable",), "", "name", "observable_names", "text"),
             Variable(

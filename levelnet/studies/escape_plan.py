@@ -3,11 +3,13 @@
 from __future__ import annotations
 
 import dataclasses
+import math
 from collections.abc import Callable, Iterable
 from typing import Literal, NamedTuple
 
 from ..errors import InputError, cut_short
-from ..escape.lines import Lines, Transfer
+from ..escape.frequency_step import coarsest_step, fitted_step, highest_line
+from ..escape.lines import COARSEST_STEP, Lines, Transfer
 from ..history.setup import Setup
 
 SWITCHES = {
@@ -129,6 +131,7 @@ def escape_plan(setup: Setup, order: Iterable[str] | None = None) -> Plan:
 
     asked = ways(switches, _NEEDS, having)
     whole = found[asked.reference]
+    _check_step(variant_setup(setup, whole))
     coarser = Variant(f"{whole.name}, cells twice as wide", _coarser(variant_setup(setup, whole)))
     switched_on = (*(frozenset[str]() for _ in treatments), *places)
     return Plan(tuple(found), switched_on, treatments, *asked[:2], switches, *asked[2:], coarser)
@@ -196,6 +199,26 @@ def variant_setup(setup: Setup, one: Variant) -> Setup:
         return dataclasses.replace(setup, lines=one.lines, helium=helium)
     except InputError as error:
         raise InputError(f"{one.name}: {error}") from None
+
+
+def _check_step(setup: Setup) -> None:
+    """Refuse a step, by the name the user gave it, of which twice as much would be refused."""
+    most = min(coarsest_step(setup.accuracy.relative), COARSEST_STEP) / 2.0
+    # The last digit of a half may be lost: what stands for it is not refused.
+    if setup.frequency_step > most * (1.0 + 1e-12):
+        raise InputError(
+            f"lines.transfer.frequency_step = {setup.frequency_step:g}: the study also runs cells "
+            "twice as wide to tell its error, so that at accuracy.relative = "
+            f"{setup.accuracy.relative:g} it allows up to {math.floor(most * 1e6) / 1e6:g}"
+        )
+    # And these on a grid twice as coarse once more, as every field is.
+    apart = highest_line(fitted_step(4.0 * setup.frequency_step)) - 1
+    if setup.atom_size.lyman_lines > apart:
+        raise InputError(
+            f"lines.transfer.frequency_step = {setup.frequency_step:g}: the study also runs cells "
+            f"twice as wide to tell its error, which tell {apart} Lyman lines apart, and "
+            f"lines.lyman_lines = {setup.atom_size.lyman_lines}"
+        )
 
 
 def _coarser(setup: Setup) -> Lines:

@@ -6,6 +6,7 @@ from collections.abc import Callable, Generator, Iterator, Sequence
 from concurrent.futures import (
     FIRST_COMPLETED,
     BrokenExecutor,
+    CancelledError,
     Executor,
     Future,
     as_completed,
@@ -20,9 +21,14 @@ from ..history.integrate import Progress
 # Jobs handed out at once, so that waiting for any of them stays cheap.
 _MOST_WAITING = 1024
 _ATTEMPTS = 2
+_LOOK_S = 2.0  # how long one waits for any answer before one is told
 
 Job = TypeVar("Job")
 Result = TypeVar("Result")
+
+
+class ExecutorLost(SolveError):
+    """Those who compute took back what was asked of them: jobs without an answer are not done."""
 
 
 def run_jobs(
@@ -97,6 +103,7 @@ def run_each(
     task: Callable[[Job], Result],
     executor: Executor | None,
     workers: int = 1,
+    still_waiting: Callable[[], None] = lambda: None,
 ) -> Iterator[tuple[int, Result | Exception]]:
     """Give every job's result, or what it failed with, as they come; no failure stops the rest.
 
@@ -108,6 +115,13 @@ def run_each(
         Processes of the pool that takes the place of one that broke. Whatever ran in a pool when it
         broke a second time is run once more, each in a process of its own, so that a job that kills
         its process is known by name.
+    still_waiting : callable, optional
+        Called every few seconds while `executor` has not answered; what it raises ends the waiting.
+
+    Raises
+    ------
+    ExecutorLost
+        If the executor cancels jobs.
 
     Yields
     ------
@@ -119,7 +133,7 @@ def run_each(
         for k in left:
             yield k, _tried(task, jobs[k])
         return
-    yield from _through(executor, jobs, task, left, _MOST_WAITING)
+    yield from _through(executor, jobs, task, left, _MOST_WAITING, still_waiting)
     while left:
         with process_pool(workers) as pool:
             suspects = yield from _through(pool, jobs, task, left, workers)
@@ -134,6 +148,7 @@ def _through(
     task: Callable[[Job], Result],
     left: dict[int, None],
     most: int,
+    still_waiting: Callable[[], None] = lambda: None,
 ) -> Generator[tuple[int, Result | Exception], None, list[int]]:
     """Run what is `left` and strike it off; if the pool breaks, return what ran in it then."""
     running: dict[Future[Result], int] = {}
@@ -147,8 +162,15 @@ def _through(
                     broken = True
             if not running:
                 return suspects
-            for future in wait(running, return_when=FIRST_COMPLETED).done:
+            done = wait(running, timeout=_LOOK_S, return_when=FIRST_COMPLETED).done
+            if not done:
+                still_waiting()
+            for future in done:
                 k, found = running.pop(future), _tried(Future.result, future)
+                if isinstance(found, CancelledError):
+                    raise ExecutorLost(
+                        "jobs were cancelled: the scheduler or the pool that had them is gone"
+                    )
                 if isinstance(found, BrokenExecutor):
                     broken = True
                     suspects.append(k)

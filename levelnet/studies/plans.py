@@ -1,7 +1,8 @@
 """What long work will take, foreseen from the setup alone; what cannot fit is refused.
 
 Times are those of :mod:`levelnet.history.cost`, good to a factor of two or three; what pieces of an
-earlier run may save is not known beforehand.
+earlier run may save is not known beforehand. Where this machine has not compiled the kernels yet,
+that is added (:mod:`levelnet.studies.first_use`).
 """
 
 from __future__ import annotations
@@ -27,6 +28,7 @@ from ..history.cost import (
 from ..history.setup import Setup
 from .escape import plan_costs
 from .escape_plan import Plan as EscapePlan
+from .first_use import first_use
 from .helium_ladder import Atom
 from .levels import POPULATION_REDSHIFTS, ladder_jobs
 from .rung import study_setup
@@ -60,6 +62,10 @@ class Plan:
         Time on the clock, and on one processor.
     setup_digest : str
         Of the one setup that it is about; "" for several.
+    first_use_of : tuple of str
+        For what code is compiled first, as this machine has not kept it; in all figures.
+    first_use_s : float, s
+        How long that takes.
     """
 
     what: str
@@ -70,6 +76,8 @@ class Plan:
     seconds: float
     processor_seconds: float
     setup_digest: str = ""
+    first_use_of: tuple[str, ...] = ()
+    first_use_s: float = 0.0
 
 
 def make_plan(
@@ -99,9 +107,24 @@ def make_plan(
     return Plan(what, len(costs), workers, needed, available_memory_bytes(), clock, total)
 
 
+def with_first_use(plan: Plan, setups: Iterable[Setup], tables: bool = False) -> Plan:
+    """Add the compilation that these setups, and histories from `tables`, need on this machine."""
+    processes = min(plan.workers, plan.runs)
+    more = first_use(setups, processes, tables)
+    return dataclasses.replace(
+        plan,
+        memory_bytes=plan.memory_bytes + more.memory_bytes,
+        seconds=plan.seconds + more.seconds,
+        processor_seconds=plan.processor_seconds + more.processor_seconds,
+        first_use_of=more.names,
+        first_use_s=more.seconds,
+    )
+
+
 def plan_solve(setup: Setup) -> Plan:
     """One history."""
-    return _about(setup, make_plan(f"setup {setup.digest}", [setup], [check_memory(setup)], 1))
+    plan = make_plan(f"setup {setup.digest}", [setup], [check_memory(setup)], 1)
+    return _about(setup, with_first_use(plan, [setup]))
 
 
 def plan_levels(
@@ -114,9 +137,11 @@ def plan_levels(
 ) -> Plan:
     """A study of levels: every rung, and the two shortest once more."""
     jobs, coarse = ladder_jobs(study_setup(setup, also_at), rungs, resolve, atom)
+    check_memory(jobs[len(rungs) - 1], workers)
     every = [*jobs, *coarse]
     costs = [estimate(one, POPULATION_REDSHIFTS) for one in every]
-    return _about(setup, make_plan(f"ladder of setup {setup.digest}", every, costs, workers))
+    plan = make_plan(f"ladder of setup {setup.digest}", every, costs, workers)
+    return _about(setup, with_first_use(plan, every))
 
 
 def plan_escape(
@@ -125,11 +150,13 @@ def plan_escape(
     """A study of the escape by one plan or both; the variants of each share a reduced network."""
     on_grid = study_setup(setup, also_at)
     each = [plan_costs(on_grid, plan) for plan in plans]
+    for plan, (variants, _) in zip(plans, each, strict=True):
+        check_memory(variants[plan.reference], workers)
     first = sum(costs[plan.base].seconds for plan, (_, costs) in zip(plans, each, strict=True))
     setups = [one for of_plan, _ in each for one in of_plan]
     costs = [one for _, of_plan in each for one in of_plan]
     what = f"variants of setup {setup.digest}"
-    return _about(setup, make_plan(what, setups, costs, workers, first))
+    return _about(setup, with_first_use(make_plan(what, setups, costs, workers, first), setups))
 
 
 def plan_distill(
@@ -149,7 +176,8 @@ def plan_distill(
     costs = [certificate, *[one] * count]
     what = f"table of setup {setup.digest}"
     plan = make_plan(what, [setup], costs, workers, certificate.seconds)
-    return _about(setup, dataclasses.replace(plan, runs=count))
+    plan = with_first_use(dataclasses.replace(plan, runs=count), [setup], tables=certify)
+    return _about(setup, plan)
 
 
 def _once_s(setup: Setup, certify: bool) -> float:
@@ -172,7 +200,8 @@ def plan_weigh(setup: Setup, n_targets: int, n_band: int) -> Plan:
     again = Cost(cost.memory_bytes, (_HISTORIES_OF_A_WEIGHING - 1.0) * cost.seconds)
     costs = [each, *[again] * len(others)]
     what = f"weighing of setup {setup.digest}"
-    return _about(setup, make_plan(what, [setup] * len(costs), costs, 1))
+    plan = make_plan(what, [setup] * len(costs), costs, 1)
+    return _about(setup, with_first_use(plan, [setup]))
 
 
 def _about(setup: Setup, plan: Plan) -> Plan:

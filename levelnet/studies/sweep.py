@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Sequence
+from collections.abc import Callable, Iterable, Iterator, Sequence
 from concurrent.futures import Executor
 from functools import partial
 from typing import NamedTuple
@@ -10,17 +10,19 @@ from typing import NamedTuple
 import numpy as np
 
 from ..arrays import FloatArray
-from ..errors import InputError
+from ..errors import InputError, SolveError
 from ..history.cost import estimate
 from ..history.integrate import Progress
 from ..history.result import HISTORY_ARRAYS
 from ..history.setup import Setup
-from ..pieces import MemoryPieces, Pieces, array_text
+from ..pieces import MemoryPieces, Pieces
 from ..quantities import OBSERVABLES, at_redshift
 from .jobs import run_each
-from .sweep_cases import Cases
+from .sweep_cases import MOST_CASES, Cases
 from .sweep_record import Sweep
 from .sweep_run import CaseResult, case_key, compute_case, failure, packed, unpacked
+
+Piece = dict[str, FloatArray]
 
 
 class Missing(InputError):
@@ -38,11 +40,14 @@ class Progressed(NamedTuple):
         Cases computed now; the same setup counts once.
     not_ok : dict of int to str
         Positions of cases whose results may not be used as they stand, and why not.
+    unanswered : int
+        Cases that were asked of a worker which gave no answer; they are not among `computed`.
     """
 
     found: int
     computed: int
     not_ok: dict[int, str]
+    unanswered: int = 0
 
 
 def sweep(
@@ -111,8 +116,11 @@ def sweep(
 
 def shard_of(count: int, number: int, shards: int) -> range:
     """Positions of the cases of shard `number` (from 1) of `shards`: every shards-th one."""
+    where = f"shard {number}/{shards}"
+    if not 1 <= shards <= MOST_CASES:
+        raise InputError(f"{where}: the count of shards must be 1 to {MOST_CASES}")
     if not 1 <= number <= shards:
-        raise InputError(f"shard {number}/{shards}: the number must be 1 to {shards}")
+        raise InputError(f"{where}: the number must be 1 to {shards}")
     return range(number - 1, count, shards)
 
 
@@ -127,7 +135,11 @@ def compute_missing(
     pieces: Pieces | None = None,
     progress: Progress | None = None,
 ) -> Progressed:
-    """Compute the chosen cases that are not finished, and keep each; see :func:`sweep`."""
+    """Compute the chosen cases that are not finished, and keep each; see :func:`sweep`.
+
+    `progress` is also called every few seconds while an executor has not answered. Where a
+    SolveError of its own, or the loss of the executor, ends the work, SolveError says what is kept.
+    """
     tell = progress or (lambda stage, fraction: None)
     tell("looking for finished cases", 0.0)
     keys = {k: case_key(cases.setups[k], optical_depth_to) for k in chosen}
@@ -135,22 +147,48 @@ def compute_missing(
     results = {key: unpacked(finished.get(key)) for key in wanted}
     # One that failed for want of memory, say, is tried again.
     missing = [key for key, one in results.items() if one is None or not one.lasting]
-    reasons = {key: one.reason for key, one in results.items() if one is not None}
-    task = partial(compute_case, pieces=pieces, optical_depth_to=optical_depth_to)
     setups = [cases.setups[wanted[key]] for key in missing]
+    answered = 0
+    task = partial(compute_case, pieces=pieces, optical_depth_to=optical_depth_to)
+    computed = _each_computed(setups, task, executor, workers, pieces is not None, tell)
+    try:
+        for k, found in computed:
+            piece = packed(_lost(found)) if isinstance(found, Exception) else found
+            finished.put(missing[k], piece)
+            results[missing[k]] = unpacked(piece)
+            answered += not isinstance(found, Exception)
+    except SolveError as error:
+        raise SolveError(
+            f"{error}; {answered} of the {len(missing)} cases that were missing are computed and "
+            "kept, a rerun does the others"
+        ) from error
+    ends = {k: results[key] for k, key in keys.items()}
+    bad = {k: one.reason for k, one in ends.items() if one is not None and not one.ok}
+    return Progressed(len(wanted) - len(missing), answered, bad, len(missing) - answered)
+
+
+def _each_computed(
+    setups: Sequence[Setup],
+    task: Callable[[Setup], Piece],
+    executor: Executor | None,
+    workers: int,
+    shared: bool,
+    tell: Progress,
+) -> Iterator[tuple[int, Piece | Exception]]:
+    """Position and piece of each setup, or what it failed with, as they come."""
     costs = [estimate(one, populations=0).seconds for one in setups]
     done = 0.0
-    for round_ in _rounds(setups, shared=pieces is not None):
+
+    def still_waiting() -> None:
+        tell("cases", done / sum(costs))
+
+    for round_ in _rounds(setups, shared):
         jobs = [setups[k] for k in round_]
-        for position, found in run_each(jobs, [costs[k] for k in round_], task, executor, workers):
-            k = round_[position]
-            piece = found if isinstance(found, dict) else packed(_lost(found))
-            finished.put(missing[k], piece)
-            reasons[missing[k]] = array_text(piece["reason"])
-            done += costs[k]
-            tell("cases", done / sum(costs))
-    bad = {k: reasons[key] for k, key in keys.items() if reasons[key]}
-    return Progressed(len(wanted) - len(missing), len(missing), bad)
+        of_round = [costs[k] for k in round_]
+        for position, found in run_each(jobs, of_round, task, executor, workers, still_waiting):
+            yield round_[position], found
+            done += costs[round_[position]]
+            still_waiting()
 
 
 def _rounds(setups: Sequence[Setup], shared: bool) -> list[list[int]]:

@@ -20,6 +20,8 @@ MOST_CASES = 1_000_000
 MOST_VALUES = 10_000_000
 """Most cases times keys: a value takes about a hundred bytes until all setups are made."""
 _MOST_WRONG = 1000  # complaints, after which further cases are not looked at
+RANGE = frozenset({"from", "to", "count", "spacing"})
+"""Keys of a range of numbers."""
 _LONGEST = 40  # characters of a value that a label repeats
 
 
@@ -238,7 +240,12 @@ def _text(value: Any) -> str:
 def flat(table: Mapping[str, Any], start: str = "") -> Iterator[tuple[str, Any]]:
     """Dotted keys of nested tables with their values; ranges, which are tables too, are values."""
     for key, value in table.items():
-        if isinstance(value, Mapping) and not {"from", "to"} <= set(value):
+        if isinstance(value, Mapping) and not _is_range(value):
             yield from flat(value, f"{start}{key}.")
         else:
             yield f"{start}{key}", value
+
+
+def _is_range(table: Mapping[str, Any]) -> bool:
+    """Whether a table is meant as a range, whole or not: a nested one has only lists and tables."""
+    return any(key in RANGE and not isinstance(table[key], list | Mapping) for key in table)

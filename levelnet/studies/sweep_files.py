@@ -14,12 +14,20 @@ from typing import Any
 from ..errors import InputError, cut_short
 from ..records import MOST_COMPLAINTS
 from ..texts import MOST_TOML, parse_toml, read_text
-from .sweep_cases import MOST_CASES, MOST_VALUES, Cases, check_count, flat, make_cases, varied
+from .sweep_cases import (
+    MOST_CASES,
+    MOST_VALUES,
+    RANGE,
+    Cases,
+    check_count,
+    flat,
+    make_cases,
+    varied,
+)
 
 _MOST_BYTES = 256_000_000  # a million rows of CSV
 _LONGEST_LINE = 100_000  # characters: a thousand of all keys that there are
 _TABLES = ("setup", "combine", "together", "title")
-_RANGE = {"from", "to", "count", "spacing"}
 _SPACINGS = ("even", "logarithmic")
 
 
@@ -30,10 +38,10 @@ def load_sweep(path: str | Path, setup: str | Path | None = None) -> Cases:
     ----------
     path : str or Path
         A CSV file, if its name ends in ``.csv``: a header of dotted keys of a setup, then one line
-        for each case; an empty cell leaves its key out. Else a TOML file: the table ``setup`` (or
-        the name of a setup file, relative to the current directory), and ``combine`` or
-        ``together`` with lists of values, or ranges ``{ from, to, count, spacing }``, by dotted
-        keys.
+        for each case; an empty cell leaves its key to `setup`, or out. Else a TOML file: the table
+        ``setup`` (or the name of a setup file, relative to the folder of this one), and
+        ``combine`` or ``together`` with lists of values, or ranges ``{ from, to, count, spacing
+        }``, by dotted keys.
     setup : str or Path, optional
         A setup file with what the rows of a CSV file have in common.
 
@@ -67,7 +75,7 @@ def _from_toml(where: str, given: dict[str, Any]) -> Cases:
         raise InputError(f"{where}: {shown}: unknown key; allowed are {known}")
     base, title = given.get("setup"), given.get("title", "")
     if isinstance(base, str):
-        base = _tables(base)
+        base = _tables(Path(where).parent / base)
     if not isinstance(base, dict):
         raise InputError(f"{where}: setup: a table, or the name of a setup file, is needed")
     if not isinstance(title, str):
@@ -99,10 +107,12 @@ def _values(given: Any) -> list[Any]:
         return given
     if not isinstance(given, Mapping):
         raise ValueError("a list of values is needed, or { from = , to = , count = }")
-    if unknown := sorted(set(given) - _RANGE):
+    if unknown := sorted(set(given) - RANGE):
         raise ValueError(
             f"{cut_short(unknown[0])}: unknown key; allowed are from, to, count, spacing"
         )
+    if missing := [key for key in ("from", "to") if key not in given]:
+        raise ValueError(f"{missing[0]}: missing; a range is {{ from = , to = , count = }}")
     low, high, count = given["from"], given["to"], given.get("count")
     spacing = given.get("spacing", "even")
     if not all(isinstance(one, int | float) and math.isfinite(one) for one in (low, high)):
@@ -150,11 +160,26 @@ def _from_csv(where: str, text: str, base: Mapping[str, Any]) -> Cases:
     ]
     if wrong:
         raise InputError(f"{where}: {_some(wrong)}")
+    common = {key: _value_at(base, key) for key in header}
     given = (
-        (f"row {k}", {key: _cell(cell) for key, cell in zip(header, row, strict=True)})
+        (
+            f"row {k}",
+            {
+                key: _cell(cell) if cell else common[key]
+                for key, cell in zip(header, row, strict=True)
+            },
+        )
         for k, row in enumerate(rows, 1)
     )
     return make_cases(where, base, given, str(base.get("title", "")))
+
+
+def _value_at(table: Mapping[str, Any], key: str) -> Any:
+    """What nested tables have under a dotted key; None where that is nothing, or a table."""
+    found: Any = table
+    for part in key.split("."):
+        found = found.get(part) if isinstance(found, Mapping) else None
+    return None if isinstance(found, Mapping) else found
 
 
 def _some(wrong: list[str]) -> str:
@@ -181,9 +206,7 @@ def _split(where: str, line: str) -> list[str]:
 
 
 def _cell(text: str) -> Any:
-    """Read a cell: a value as TOML writes it, else the text itself; None where it is empty."""
-    if not text:
-        return None
+    """Read a cell: a value as TOML writes it, else the text itself."""
     try:
         found = parse_toml(f"x = {text}", "")
     except ValueError:  # no TOML, or more than a cell may hold

@@ -7,7 +7,7 @@ from collections.abc import Sequence
 from ..errors import InputError
 from ..history.cost import Cost, check_fits, estimate
 from ..pieces import Pieces
-from .plans import Plan, make_plan
+from .plans import Plan, make_plan, with_first_use
 from .sweep import first_of_each_atom
 from .sweep_cases import Cases
 from .sweep_run import case_key, unpacked
@@ -40,7 +40,7 @@ def plan_sweep(
         return make_plan(what, [cases.setups[0]], [Cost(0.0, 0.0)], 1)
     first = set(first_of_each_atom(setups))
     costs = [estimate(one, 0, reduced=k not in first) for k, one in enumerate(setups)]
-    return make_plan(what, setups, costs, workers)
+    return with_first_use(make_plan(what, setups, costs, workers), setups)
 
 
 def check_sweep_memory(cases: Cases, chosen: Sequence[int], workers: int) -> None:

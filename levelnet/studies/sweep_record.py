@@ -39,7 +39,8 @@ class Sweep:
     outcome : tuple of str, length n_cases
         How each ended: name of an :class:`levelnet.Outcome`, or "FAILED".
     reason : tuple of str, length n_cases
-        Why a case gave nothing, or nothing that may be used as it stands; "" where it did.
+        Why a case gave nothing, or nothing that may be used as it stands; of one that did, which
+        observables its history does not reach and why; "" where nothing is missing.
     redshift : ndarray, shape (n_redshift,) or (n_cases, n_redshift), dimensionless
         Descending: outputs of all cases where these are the same, else those of each, NaN after
         its last one.
@@ -102,6 +103,14 @@ class Sweep:
         """Positions of the cases whose results may not be used as they stand."""
         good = Outcome.CONVERGED.name
         return tuple(k for k, name in enumerate(self.outcome) if name != good)
+
+    def notes(self) -> dict[str, tuple[int, ...]]:
+        """What cases that are ok do not reach, each note once, with the positions of its cases."""
+        found: dict[str, tuple[int, ...]] = {}
+        for k, text in enumerate(self.reason):
+            if text and self.outcome[k] == Outcome.CONVERGED.name:
+                found[text] = (*found.get(text, ()), k)
+        return found
 
     def label(self, k: int) -> str:
         """Case as a person knows it: its position and what is special in it."""

@@ -13,6 +13,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from ..arrays import FloatArray
+from ..background.last_scattering import Observed
 from ..errors import InputError, Outcome, SolveError
 from ..history.cost import check_memory
 from ..history.helium_outputs import helium_moments
@@ -41,7 +42,8 @@ class CaseResult:
     outcome : str
         Name of an :class:`Outcome`, or "FAILED".
     reason : str
-        Why there is no result that may be used as it stands; "" where there is one.
+        Why there is no result that may be used as it stands; where there is one, which observables
+        it does not reach and why, "" where it reaches all.
     lasting : bool
         Whether a rerun would come to the same.
     arrays : mapping of str to ndarray, shape (n_redshift,)
@@ -120,14 +122,24 @@ def _computed(setup: Setup, pieces: Pieces | None, depths: tuple[float, ...]) ->
     slowest = [*map(relaxation_hubble, here), *(one.relaxation_hubble for one in moments)]
     outcome = outcome_of(setup, integrated, slowest)
     conditions = [one.conditions for one in here]
+    seen = observed(setup, integrated, depths)
     arrays, _ = history_arrays(setup, integrated, redshift, conditions, moments)
     return CaseResult(
         outcome.name,
-        "" if outcome.ok else outcome.value,
+        _unreached(seen) if outcome.ok else outcome.value,
         True,
         {"redshift": redshift, **arrays},
-        observed(setup, integrated, depths).value,
+        seen.value,
     )
+
+
+def _unreached(seen: Observed) -> str:
+    """Which observables a history does not reach, and why: those with the same reason together."""
+    names: dict[str, list[str]] = {}
+    for name, why in zip(seen.names, seen.missing, strict=True):
+        if why:
+            names.setdefault(why, []).append(name)
+    return "; ".join(f"{', '.join(of)} not reached: {why}" for why, of in names.items())
 
 
 def packed(result: CaseResult) -> dict[str, FloatArray]:

@@ -111,19 +111,37 @@ def weigh(
     listed = [targets] if isinstance(targets, str) else list(targets)
     if not listed or not all(isinstance(text, str) for text in listed):
         raise InputError("targets: name at least one, such as x_e(900), as text")
-    parsed = [parse_target(text) for text in listed]
-    _check_constants(setup)
+    chosen = line_treatment or member(setup.lines.hydrogen)
+    parsed = check_weighable(setup, listed, chosen)
     check_memory(setup, more_bytes=len(parsed) * bytes_per_target(setup))
     with one_blas_thread():
-        _check_targets(setup, parsed)
-        chosen = line_treatment or member(setup.lines.hydrogen)
-        _check_memory_free(chosen)
         history = freeze(setup, *reach(setup, parsed), tell, pieces, chosen)
         scalars = scalars_of(history, parsed)
         for target, value in zip(parsed, scalars.value.tolist(), strict=True):
             if not np.isfinite(value):
                 raise InputError(f"target {target.name}: the history does not reach it")
         return _assemble(setup, history, parsed, scalars, tell, pieces)
+
+
+def check_weighable(
+    setup: Setup, targets: Sequence[str], chosen: LineTreatment | None = None
+) -> list[Target]:
+    """Read targets; InputError for what can be refused before anything is computed.
+
+    Parameters
+    ----------
+    setup : Setup
+        The history.
+    targets : sequence of str
+        As for :func:`weigh`.
+    chosen : LineTreatment, optional
+        That of the Lyman lines, in place of the one the setup names.
+    """
+    parsed = [parse_target(text) for text in targets]
+    _check_constants(setup)
+    _check_targets(setup, parsed)
+    _check_memory_free(chosen or member(setup.lines.hydrogen))
+    return parsed
 
 
 def reach(

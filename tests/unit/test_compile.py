@@ -5,6 +5,7 @@ from __future__ import annotations
 import importlib.util
 import sys
 from pathlib import Path
+from typing import Any
 
 import pytest
 
@@ -18,14 +19,20 @@ def twice(x):
 """
 
 
-def call(folder: Path) -> tuple[float, int]:
-    """Load the kernel as a new process would, and call it: the result, and if the cache served."""
+def loaded(folder: Path) -> Any:
+    """Load the kernel as a new process would."""
     spec = importlib.util.spec_from_file_location("mine", folder / "mine.py")
     assert spec is not None
     assert spec.loader is not None
     mine = importlib.util.module_from_spec(spec)
     sys.modules["mine"] = mine
     spec.loader.exec_module(mine)
+    return mine
+
+
+def call(folder: Path) -> tuple[float, int]:
+    """Load the kernel and call it: the result, and whether the cache served."""
+    mine = loaded(folder)
     return mine.twice(21.0), sum(mine.twice.stats.cache_hits.values())
 
 
@@ -37,6 +44,22 @@ def folder(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Path:
     assert call(tmp_path) == (42.0, 0)
     assert call(tmp_path) == (42.0, 1)
     return tmp_path
+
+
+def test_what_is_kept_is_known_without_a_call(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    (tmp_path / "mine.py").write_text(KERNEL)
+    monkeypatch.setattr(compile_module, "_FOLDER", str(tmp_path / "cache"))
+    monkeypatch.setitem(sys.modules, "mine", None)
+    kept = compile_module.is_kept
+    assert not kept(loaded(tmp_path).twice)
+    assert call(tmp_path) == (42.0, 0)
+    assert kept(loaded(tmp_path).twice)
+    assert kept(len)  # a plain function, as where compilation is switched off
+    (path,) = (tmp_path / "cache").rglob("*.nbi")
+    path.write_bytes(path.read_bytes()[:-1])
+    assert not kept(loaded(tmp_path).twice)
 
 
 @pytest.mark.parametrize("ending", ["nbi", "nbc"])

@@ -89,18 +89,18 @@ def test_default_order_needs_few_runs() -> None:
 
 
 def test_what_is_no_switch_is_kept() -> None:
-    lines = {"hydrogen": "transfer", "lyman_lines": 4, "transfer": {"frequency_step": 1e-3}}
+    lines = {"hydrogen": "transfer", "lyman_lines": 4, "transfer": {"frequency_step": 5e-4}}
     setup = small_setup(6, lines=lines)
     for one in escape_plan(setup).variants:
         assert one.lines.lyman_lines == 4
         if one.lines.transfer is not None:
-            assert one.lines.transfer.frequency_step == 1e-3
+            assert one.lines.transfer.frequency_step == 5e-4
     full = transfer_lines(setup.lines, frozenset(SWITCHES))
     assert full == setup.lines
     coarser = escape_plan(setup).coarser
     assert coarser is not None
     assert coarser.lines.transfer is not None
-    assert coarser.lines.transfer.frequency_step == 2e-3
+    assert coarser.lines.transfer.frequency_step == 1e-3
 
 
 @pytest.mark.parametrize(

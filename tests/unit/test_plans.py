@@ -17,6 +17,7 @@ from levelnet.errors import InputError
 from levelnet.history import cost
 from levelnet.history.cost import Cost, estimate, node_seconds
 from levelnet.pieces import MemoryPieces
+from levelnet.studies import first_use
 from levelnet.studies.escape import escape_plans
 from levelnet.studies.plans import (
     make_plan,
@@ -103,11 +104,37 @@ def test_a_sweep_counts_what_is_missing_and_each_atom_once() -> None:
     kept = MemoryPieces()
     plan = plan_sweep(cases, range(3), 1, kept)
     first, other = (estimate(cases.setups[0], 0, reduced=one).seconds for one in (False, True))
-    assert plan.seconds == pytest.approx(first + 2.0 * other)
+    assert plan.seconds - plan.first_use_s == pytest.approx(first + 2.0 * other)
     compute_missing(cases, [0, 1, 2], kept)
     done = plan_sweep(cases, range(3), 1, kept)
     assert done.seconds == 0.0
     assert done.what == "sweep of 3 cases, 3 of them there already,"
+
+
+def test_compilation_is_in_the_plan_where_nothing_is_kept(monkeypatch: pytest.MonkeyPatch) -> None:
+    # Times are by hand (levelnet/studies/first_use.py); here: who compiles what, and how often.
+    plain, helium = small_setup(8), helium_setup(4)
+    field = small_setup(8, 200.0)
+    monkeypatch.setattr(first_use, "is_kept", lambda kernel: True)
+    kept = plan_solve(plain), plan_distill(helium, 1e-8, True, 2)
+    assert all(one.first_use_of == () and one.first_use_s == 0.0 for one in kept)
+    monkeypatch.setattr(first_use, "is_kept", lambda kernel: False)
+    new = plan_solve(plain)
+    assert new.first_use_of == ("hydrogen",)
+    assert new.seconds == pytest.approx(kept[0].seconds + new.first_use_s)
+    assert new.memory_bytes > kept[0].memory_bytes
+    table = plan_distill(helium, 1e-8, True, 2)
+    assert table.first_use_of == ("hydrogen", "helium", "tables with helium")
+    assert table.seconds == pytest.approx(kept[1].seconds + table.first_use_s)
+    # Both processes reduce networks, one makes the histories.
+    more = table.processor_seconds - kept[1].processor_seconds
+    assert table.first_use_s < more < 2.0 * table.first_use_s
+    assert plan_distill(plain, 1e-8, True, 1).first_use_of == ("hydrogen", "tables")
+    assert plan_distill(helium, 1e-8, False, 2).first_use_of == ("hydrogen", "helium")
+    variants = plan_escape(field, escape_plans(field), (), 1)
+    assert variants.first_use_of == ("hydrogen", "transfer")
+    ladder = plan_levels(helium, (4, 5, 6, 8), (), (), 2, "helium")
+    assert ladder.first_use_of == plan_weigh(helium, 1, 0).first_use_of == ("hydrogen", "helium")
 
 
 LONG: dict[str, tuple[str, ...]] = {
@@ -137,9 +164,71 @@ def test_plan_prints_or_refuses_and_writes_nothing(
     assert len(plan["setup_digest"]) == 16 and plan["setup_digest"] in plan["what"]
     assert plan["memory_bytes"] > 8 * 400**3 / 3
     assert 0.0 < plan["seconds"] <= plan["processor_seconds"]
+    monkeypatch.setattr(first_use, "is_kept", lambda kernel: False)
+    assert main(words) == 0
+    assert "of it first use       on this machine: about" in capsys.readouterr().out
     monkeypatch.setattr(cost, "available_memory_bytes", lambda: 3.2e8)
     assert main(words) == 2
     refused = capsys.readouterr()
     assert "hydrogen.n_max = 400: about" in refused.err and "320 MB available" in refused.err
     assert refused.err.count("\n") == 1 and not refused.out
     assert {path.name for path in tmp_path.iterdir()} == {"big.toml"}
+
+
+NAMED = {"solve": ".h5", "levels": "-levels.h5", "escape": "-escape.h5", "distill": "-table.h5"}
+
+
+@pytest.mark.parametrize("command", LONG)
+def test_a_plan_refuses_the_places_that_the_run_refuses(
+    command: str,
+    tmp_path: Path,
+    monkeypatch: pytest.MonkeyPatch,
+    capsys: pytest.CaptureFixture[str],
+) -> None:
+    monkeypatch.chdir(tmp_path)
+    (tmp_path / "good.toml").write_text(GOOD.replace("n_max = 4", "n_max = 30"))
+    more = ("--rungs", "10,15,20,30") if command == "levels" else ()
+    there = tmp_path / f"good{NAMED.get(command, '-weights.h5')}"
+    there.write_text("mine")
+    for target, said in (
+        (tmp_path / "missing/x.h5", "the folder"),
+        (there, "already exists; use --force to replace it"),
+        (tmp_path / "good.toml", "is the file that is read"),
+    ):
+        assert main([command, "good.toml", *more, "--plan", "-o", str(target)]) == 2
+        refused = capsys.readouterr()
+        assert said in refused.err and refused.err.count("\n") == 1 and not refused.out
+    if command in NAMED:  # a weighing writes nothing that is not asked for
+        assert main([command, "good.toml", *more, "--plan"]) == 2
+    assert main([command, "good.toml", *more, "--plan", "-o", str(there), "--force"]) == 0
+    assert there.read_text() == "mine"
+
+
+@pytest.mark.parametrize(
+    ("words", "changed", "said"),
+    [
+        (("--uncertainties", "big.csv"), ("", ""), "1 MB"),
+        (("--uncertainties", "none.csv"), ("", ""), "none.csv"),
+        (("--of", "line(40d-2p)"), ("", ""), "up to n = 4 only"),
+        (("--of", "optical_depth(100)"), ("", ""), "starts at grid.redshift_end"),
+        ((), ("[grid]", '[lines]\nhydrogen = "sobolev_feedback"\n[grid]'), "no memory"),
+    ],
+)
+def test_a_plan_refuses_the_question_that_a_weighing_refuses(
+    words: tuple[str, ...],
+    changed: tuple[str, str],
+    said: str,
+    tmp_path: Path,
+    monkeypatch: pytest.MonkeyPatch,
+    capsys: pytest.CaptureFixture[str],
+) -> None:
+    monkeypatch.chdir(tmp_path)
+    (tmp_path / "good.toml").write_text(GOOD.replace(*changed) if changed[0] else GOOD)
+    (tmp_path / "big.csv").write_text("x" * 1_100_000)
+    complaints = set()
+    for more in ((), ("--plan",)):
+        assert main(["weigh", "good.toml", *words, *more]) == 2
+        refused = capsys.readouterr()
+        assert said in refused.err and not refused.out
+        complaints.add(refused.err)
+    assert len(complaints) == 1

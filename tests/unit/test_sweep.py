@@ -15,7 +15,8 @@ import numpy as np
 import pytest
 
 import levelnet
-from levelnet.errors import InputError, Outcome
+from levelnet.cli.sweep_output import sweep_summary, sweep_values
+from levelnet.errors import InputError, Outcome, SolveError
 from levelnet.history.result import HISTORY_ARRAYS
 from levelnet.history.run import solve
 from levelnet.history.setup import parse_setup
@@ -108,10 +109,46 @@ def test_a_result_that_is_not_ok_is_kept_with_its_reason() -> None:
     assert compute_missing(Cases("", (good, neither)), range(2), kept)[:2] == (2, 0)
 
 
+def test_what_a_good_case_does_not_reach_is_told_with_the_reason() -> None:
+    wide = {"redshift_start": 1500.0, "redshift_end": 200.0, "n_redshifts": 9}
+    cases = vary(
+        small_setup(4, grid=wide),
+        together={
+            "cosmology.helium_mass_fraction": [0.245, 0.9999, 0.245, 0.245],
+            "cosmology.baryon_density_h2": [0.0224, 0.0224, 1e-12, 0.0224],
+            "grid.redshift_end": [200.0, 200.0, 200.0, 1200.0],
+        },
+    )
+    kept = MemoryPieces()
+    done = compute_missing(cases, range(4), kept, optical_depth_to=(300.0,))
+    found = gather(cases, kept, (300.0,))
+    assert done.not_ok == {} and found.not_ok == () and found.reason[0] == ""
+    for k in range(4):
+        missing = [n for n in found.observable_names if np.isnan(found[n][k])]
+        assert bool(missing) == bool(found.reason[k])
+        assert all(name in found.reason[k] for name in missing)
+    for k in (1, 2):
+        # tau over the grid, by what the case itself delivers from its start at z = 1500.
+        depth = found.arrays["optical_depth"][k, 0]
+        assert np.isnan(found["last_scattering_redshift"][k]) and 0.0 < depth < 1.0
+        assert (
+            "last_scattering_redshift, last_scattering_time_s, sound_horizon_mpc"
+            in (found.reason[k])
+        )
+        assert "the optical depth comes to " in found.reason[k] and ", not to 1" in found.reason[k]
+    assert "at the lowest redshift, 1200, x_e is 0.3" in found.reason[3]
+    assert "optical_depth(300) not reached: that redshift is outside the grid" in found.reason[3]
+    assert list(found.notes().values()) == [(1,), (2,), (3,)]
+    text = sweep_summary(found)
+    assert "note                  case 1 (cosmology.helium_mass_fraction = 0.9999" in text
+    assert "not ok" not in text
+    assert [one["cases"] for one in sweep_values(found)["notes"]] == [[1], [2], [3]]
+
+
 def test_a_rerun_does_only_what_is_missing(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
     cases, folder = small_cases(), ResultFolder(tmp_path / "cases")
     first = compute_missing(cases, [0, 4], folder, optical_depth_to=(1000.0,))
-    assert first == (0, 2, {4: Outcome.STEP_LIMIT.value})
+    assert first == (0, 2, {4: Outcome.STEP_LIMIT.value}, 0)
     done: list[str] = []
     real = engine.compute_case
 
@@ -150,7 +187,7 @@ def test_a_damaged_case_is_computed_again(tmp_path: Path) -> None:
     files[2].write_bytes(bytes(data))
     with pytest.raises(Missing, match="1 of 5 cases are not computed yet, the first is case"):
         gather(cases, folder, (1000.0,))
-    found, computed, _ = compute_missing(cases, range(5), folder, optical_depth_to=(1000.0,))
+    found, computed, *_ = compute_missing(cases, range(5), folder, optical_depth_to=(1000.0,))
     assert (found, computed) == (4, 1)
     assert same_bits(gather(cases, folder, (1000.0,)), plain())
 
@@ -217,7 +254,7 @@ def test_what_another_day_may_not_have_is_tried_again(
     assert found.outcome == ("FAILED",)
     assert found.reason == (reason,)
     assert found.redshift.shape == (0,)
-    assert compute_missing(cases, [0], kept) == (0, 1, {})
+    assert compute_missing(cases, [0], kept) == (0, 1, {}, 0)
 
 
 def test_no_memory_for_a_case_is_its_reason(monkeypatch: pytest.MonkeyPatch) -> None:
@@ -295,7 +332,46 @@ def test_an_answer_that_never_came_is_a_reason() -> None:
 
     done = compute_missing(cases, [0], kept, executor=Lost())
     assert done.not_ok == {0: "RuntimeError: the worker left"}
-    assert compute_missing(cases, [0], kept) == (0, 1, {})
+    assert (done.computed, done.unanswered) == (0, 1)
+    assert compute_missing(cases, [0], kept)[:3] == (0, 1, {})
+
+
+def test_cases_that_were_cancelled_are_not_computed() -> None:
+    setups = [small_setup(n, grid=GRID) for n in (4, 5, 6)]
+    cases, kept = Cases("", tuple(setups)), MemoryPieces()
+
+    class Left(Executor):
+        """It answers once; then its scheduler is gone, and it takes the rest back."""
+
+        def submit(self, task: Any, *given: Any, **named: Any) -> Future[Any]:
+            future: Future[Any] = Future()
+            if given[0] == setups[2]:
+                future.set_result(task(*given))
+            else:
+                future.cancel()
+                future.set_running_or_notify_cancel()
+            return future
+
+    with pytest.raises(SolveError, match="of the 3 cases that were missing are computed and kept"):
+        compute_missing(cases, [0, 1, 2], kept, executor=Left())
+    with pytest.raises(Missing):
+        gather(cases, kept)
+
+
+def test_one_who_waits_is_told_now_and_then(monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setattr(jobs, "_LOOK_S", 0.01)
+
+    class Silent(Executor):
+        def submit(self, *given: Any, **named: Any) -> Future[Any]:
+            return Future()
+
+    def impatient(stage: str, fraction: float) -> None:
+        if stage == "cases":
+            raise SolveError("no workers")
+
+    cases = Cases("", (small_setup(4, grid=GRID),))
+    with pytest.raises(SolveError, match="no workers; 0 of the 1 cases"):
+        compute_missing(cases, [0], MemoryPieces(), executor=Silent(), progress=impatient)
 
 
 def test_a_sweep_without_cases_is_refused() -> None:

@@ -133,6 +133,29 @@ def test_a_date_is_a_title_like_any_other(tmp_path: Path) -> None:
     assert cases.columns == (("2026-12-01", "plain"),)
 
 
+def test_an_empty_cell_leaves_its_key_to_the_common_setup(tmp_path: Path) -> None:
+    rows = "hydrogen.n_max,cosmology.hubble_km_s_mpc\n4,66\n5,\n"
+    cases = loaded(tmp_path, rows, "rows.csv", setup=BASE.replace("[setup.", "["))
+    assert [one.cosmology.hubble_km_s_mpc for one in cases.setups] == [66.0, 68.0]
+    assert cases.columns == ((4, 5), (66.0, 68.0))
+    assert cases.label(1) == "case 1 (hydrogen.n_max = 5, cosmology.hubble_km_s_mpc = 68)"
+
+
+def test_a_setup_is_named_relative_to_the_file_that_names_it(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    folder = tmp_path / "sweeps"
+    folder.mkdir()
+    (folder / "common.toml").write_text(BASE.replace("[setup.", "["))
+    (tmp_path / "common.toml").write_text("of another")
+    monkeypatch.chdir(tmp_path)
+    text = 'setup = "common.toml"\n[combine]\nhydrogen.n_max = [4, 6]\n'
+    (folder / "sweep.toml").write_text(text)
+    assert len(load_sweep("sweeps/sweep.toml")) == 2
+    (folder / "sweep.toml").write_text(text.replace("common", f"{tmp_path}/sweeps/common"))
+    assert len(load_sweep("sweeps/sweep.toml")) == 2
+
+
 def test_from_python() -> None:
     setup = small_setup(5)
     cases = vary(setup, {"hydrogen.n_max": [4, 6]}, {"grid.redshift_end": [200.0, 300.0]})
@@ -238,6 +261,14 @@ def test_files_that_blow_up_are_refused_at_once(tmp_path: Path, name: str) -> No
         (
             BASE + "[combine]\nhydrogen.n_max = { from = 4, to = 6 }\n",
             "combine.hydrogen.n_max: count: a whole number from 2",
+        ),
+        (
+            BASE + "[combine]\nhydrogen.n_max = { to = 9, count = 3 }\n",
+            "combine.hydrogen.n_max: from: missing; a range is { from = , to = , count = }",
+        ),
+        (
+            BASE + "[combine]\nhydrogen.n_max = { from = 9 }\n",
+            "combine.hydrogen.n_max: to: missing; a range is { from = , to = , count = }",
         ),
         (
             BASE + "[combine]\nhydrogen.n_max = { from = 4, to = 6, count = 2, step = 1 }\n",

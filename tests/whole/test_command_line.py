@@ -382,7 +382,32 @@ def test_disk_full_is_exit_code_1_and_leaves_nothing(
         assert "No space left" in complaint(capsys)
     assert main(["show", str(solved), "--plot", "f"]) == 1
     assert "No space left" in complaint(capsys)
-    assert [p.name for p in folder.rglob("*") if p.is_file()] == ["good.toml"]
+    assert [p.name for p in folder.rglob("*")] == ["good.toml"]
+
+
+def test_disk_that_fills_up_leaves_no_figure_and_the_old_ones(
+    solved: Path, folder: Path, capsys: pytest.CaptureFixture[str], monkeypatch: pytest.MonkeyPatch
+) -> None:
+    drawn = iter([b"old"] * 10 + [b"new"] * 30)
+    monkeypatch.setattr("levelnet.report.style.render", lambda figure, kind: next(drawn))
+    words = ["show", str(solved), "--plot", "a/f", "--force"]
+    assert main(words) == 0
+    assert {p.read_bytes() for p in (folder / "a/f").iterdir()} == {b"old"}
+    written = 0
+
+    def full(descriptor: int) -> None:
+        nonlocal written
+        written += 1
+        if written % 5 == 0:
+            raise OSError(errno.ENOSPC, os.strerror(errno.ENOSPC))
+
+    monkeypatch.setattr(os, "fsync", full)
+    capsys.readouterr()
+    assert main(words) == 1
+    assert "No space left" in complaint(capsys)
+    assert {p.read_bytes() for p in (folder / "a/f").iterdir()} == {b"old"}
+    assert main(["show", str(solved), "--plot", "b/f"]) == 1
+    assert not (folder / "b").exists()
 
 
 def test_warnings_are_one_line_each(

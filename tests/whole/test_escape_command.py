@@ -137,11 +137,40 @@ PLAIN = GOOD.replace("n_max = 4", "n_max = 8")
 @pytest.mark.parametrize(
     ("changed", "message"),
     [
-        (("n_max = 8", "n_max = 3"), "lines.transfer: needs levels up to n = 4"),
-        (("end = 200.0", "end = 10.0"), "grid.redshift_end = 10: the field is resolved down to"),
+        (
+            ("n_max = 8", "n_max = 3"),
+            "transfer with every switch: lines.transfer: needs levels up to n = 4",
+        ),
+        (
+            ("end = 200.0", "end = 10.0"),
+            "transfer with every switch: grid.redshift_end = 10: the field is resolved down to",
+        ),
         (
             ("[grid]", "[accuracy]\nrelative = 2e-8\n" + FIELD.format(1.5e-4) + "[grid]"),
-            "cells twice as wide: lines.transfer.frequency_step = 0.0003: too coarse",
+            "lines.transfer.frequency_step = 0.00015: the study also runs cells twice as wide to "
+            "tell its error, "
+            "so that at accuracy.relative = 2e-08 it allows up to 0.000125",
+        ),
+        (
+            ("[grid]", FIELD.format(1.5e-3) + "[grid]"),
+            "lines.transfer.frequency_step = 0.0015: the study also runs cells twice as wide to "
+            "tell its error, "
+            "so that at accuracy.relative = 1e-06 it allows up to 0.000886",
+        ),
+        (
+            ("[grid]", "[accuracy]\nrelative = 1e-5\n" + FIELD.format(1.1e-3) + "[grid]"),
+            "lines.transfer.frequency_step = 0.0011: the study also runs cells twice as wide to "
+            "tell its error, so that at accuracy.relative = 1e-05 it allows up to 0.001",
+        ),
+        (
+            (
+                "[grid]",
+                "[accuracy]\nrelative = 1e-4\n"
+                + FIELD.format(1e-3).replace("[lines]\n", "[lines]\nlyman_lines = 5\n")
+                + "[grid]",
+            ),
+            "lines.transfer.frequency_step = 0.001: the study also runs cells twice as wide to "
+            "tell its error, which tell 4 Lyman lines apart, and lines.lyman_lines = 5",
         ),
     ],
 )
@@ -154,6 +183,5 @@ def test_setup_that_does_not_go_with_the_reference(
     said = capsys.readouterr()
     assert said.out == ""
     assert len(said.err.splitlines()) == 1
-    assert "error: transfer with every switch" in said.err
-    assert message in said.err
+    assert f"error: {message}" in said.err
     assert [path.name for path in folder.iterdir()] == ["good.toml"]

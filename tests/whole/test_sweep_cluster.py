@@ -2,8 +2,11 @@
 
 from __future__ import annotations
 
+import json
 import os
 import signal
+import subprocess
+import sys
 import threading
 import time
 from pathlib import Path
@@ -15,6 +18,7 @@ from levelnet.studies.sweep import sweep
 from levelnet.studies.sweep_cases import Cases, vary
 from tests.small_runs import small_setup
 from tests.unit.test_sweep import same_bits
+from tests.whole.test_command_line import GOOD, environment
 
 distributed = pytest.importorskip("distributed", reason="distributed is not installed")
 
@@ -68,3 +72,44 @@ def test_a_worker_killed_in_mid_task(tmp_path: Path) -> None:
     assert found.not_ok == ()
     assert len(list(finished.folder.glob("*.piece"))) == 64
     assert same_bits(found, sweep(cases, pieces=MemoryPieces()))
+
+
+@pytest.mark.slow
+@pytest.mark.filterwarnings("default")
+def test_a_scheduler_that_dies_half_way_ends_with_a_clear_line(tmp_path: Path) -> None:
+    rows = "\n".join(f"{4 + k % 2},{66 + k}" for k in range(40))
+    (tmp_path / "sweep.csv").write_text(f"hydrogen.n_max,cosmology.hubble_km_s_mpc\n{rows}\n")
+    (tmp_path / "setup.toml").write_text(GOOD)
+    words = ["sweep", "sweep.csv", "--setup", "setup.toml", "--cases", "cases", "--scheduler"]
+    dask = [sys.executable, "-m", "dask"]
+    quiet = {"stdout": subprocess.DEVNULL, "stderr": subprocess.DEVNULL, "cwd": tmp_path}
+    scheduler = subprocess.Popen(
+        [*dask, "scheduler", "--host", "127.0.0.1", "--port", "0", "--no-dashboard",
+         "--scheduler-file", "address"],
+        **quiet,
+    )  # fmt: skip
+    give_up = time.monotonic() + 120.0
+    while not (tmp_path / "address").exists() and time.monotonic() < give_up:
+        time.sleep(0.1)
+    address = json.loads((tmp_path / "address").read_text())["address"]
+    worker = subprocess.Popen([*dask, "worker", address, "--nthreads", "1", "--no-nanny"], **quiet)
+    try:
+        command = subprocess.Popen(
+            [sys.executable, "-m", "levelnet", *words, address],
+            cwd=tmp_path, env=environment(), text=True,
+            stdout=subprocess.PIPE, stderr=subprocess.PIPE,
+        )  # fmt: skip
+        give_up = time.monotonic() + 240.0
+        while len(list((tmp_path / "cases").glob("*.piece"))) < 2 and time.monotonic() < give_up:
+            time.sleep(0.05)
+        scheduler.kill()
+        out, error = command.communicate(timeout=120.0)
+    finally:
+        for one in (worker, scheduler):
+            one.kill()
+            one.wait()
+    assert command.returncode == 1
+    kept = len(list((tmp_path / "cases").glob("*.piece")))
+    assert 2 <= kept < 40 and not out
+    assert error.startswith("levelnet: error: cases: ") and error.count("\n") == 1
+    assert f"{kept} of the 40 cases that were missing are computed and kept" in error

@@ -5,6 +5,7 @@ What is expected is the project's own contract, as in test_command_line.py.
 
 from __future__ import annotations
 
+import gc
 import json
 import sys
 from pathlib import Path
@@ -12,7 +13,7 @@ from pathlib import Path
 import pytest
 
 import levelnet
-from levelnet.cli import sweep as command
+from levelnet.cli import scheduler
 from levelnet.cli.main import main
 from levelnet.studies.sweep_record import Sweep
 from tests.whole.test_command_line import GOOD
@@ -84,6 +85,11 @@ def test_plan_says_what_is_left_and_writes_nothing(
     capsys.readouterr()
     assert run("--plan") == 0
     assert "sweep of 3 cases, 1 of them there already, is valid" in capsys.readouterr().out
+    for target in ("missing/x.h5", "sweep.toml"):
+        assert run("--plan", "--output", target) == 2
+    (folder / "sweep.h5").write_text("mine")
+    assert run("--plan") == 2
+    (folder / "sweep.h5").unlink()
     assert run("--shard", "4/4") == 0  # a shard may have nothing to do
     (folder / "sweep.toml").write_text(SWEEP.replace("[4, 5, 4]", "[4, 900, 4]"))
     with pytest.MonkeyPatch.context() as patch:
@@ -104,7 +110,12 @@ def test_plan_says_what_is_left_and_writes_nothing(
         (("--shard", "0/3"), "shard 0/3: the number must be 1 to 3"),
         (("--shard", "x"), "--shard x: write the number and the count, such as 3/16"),
         (("--shard", "1/2", "--merge"), "not allowed with argument"),
-        (("--jobs", "0"), "--workers = 0: allowed are 1 to 1024"),
+        (("--jobs", "0"), "--jobs = 0: allowed are 1 to 1024"),
+        (("--shard", "1/0"), "shard 1/0: the count of shards must be 1 to 1000000"),
+        (
+            ("--shard", "1/1000000000000"),
+            "shard 1/1000000000000: the count of shards must be 1 to 1000000",
+        ),
         (("--depth-to", "-1"), "--depth-to -1: allowed are redshifts above 0, to 10000"),
         (("--setup", "sweep.toml"), "--setup goes with CSV files only"),
         (("--output", "sweep.toml", "--force"), "is the file that is read"),
@@ -133,6 +144,45 @@ def test_a_scheduler_that_is_not_there(
         assert run("--scheduler", "tcp://127.0.0.1:1") == 2
         assert "install levelnet[cluster]" in capsys.readouterr().err
     pytest.importorskip("distributed")
-    monkeypatch.setattr(command, "_ANSWER_S", 1.0)
-    assert run("--scheduler", "tcp://127.0.0.1:1") == 2
-    assert "--scheduler tcp://127.0.0.1:1: no scheduler answers" in capsys.readouterr().err
+    monkeypatch.setattr(scheduler, "_ANSWER_S", 1.0)
+    # The second needs certificates, and the library says so in a way of its own.
+    for address in ("tcp://127.0.0.1:1", "tls://127.0.0.1:1"):
+        assert run("--scheduler", address) == 2
+        gc.collect()  # a client that was not closed complains as it is forgotten
+        said = capsys.readouterr().err
+        assert f"--scheduler {address}: no scheduler answers" in said and said.count("\n") == 1
+
+
+@pytest.mark.parametrize(
+    "address",
+    ["nonsense", "host:8786", "tcp://host", "tcp://host:0", "tcp://host:70000", "http://host:80"],
+)
+@pytest.mark.parametrize("more", [(), ("--plan",)])
+def test_an_address_that_is_none_is_refused_at_once(
+    address: str, more: tuple[str, ...], folder: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    assert run("--scheduler", address, *more) == 2
+    gc.collect()
+    said = capsys.readouterr().err
+    assert f"--scheduler {address}: no address; write scheme://host:port" in said
+    assert said.count("\n") == 1
+
+
+@pytest.mark.filterwarnings("default")  # those of the library are its own
+def test_a_scheduler_without_workers_is_said_and_not_waited_for_for_ever(
+    folder: Path, capsys: pytest.CaptureFixture[str], monkeypatch: pytest.MonkeyPatch
+) -> None:
+    distributed = pytest.importorskip("distributed")
+    monkeypatch.setattr(scheduler, "_PATIENCE_S", 1.0)
+    with distributed.LocalCluster(
+        n_workers=0, dashboard_address=None, local_directory=folder / "dask"
+    ) as cluster:
+        address = cluster.scheduler_address
+        assert run("--scheduler", address) == 1
+    said = capsys.readouterr().err.splitlines()
+    assert said == [
+        f"levelnet: scheduler {address}: it has no workers; waiting 1 s for one",
+        f"levelnet: error: sweep-cases: the scheduler {address} had no workers for 1 s; 0 of the 3 "
+        "cases that were missing are computed and kept, a rerun does the others",
+    ]
+    assert not (folder / "sweep.h5").exists()
