@@ -679,7 +679,7 @@ def test_show_table(
 ) -> None:
     assert main(["show", str(distilled), "--json"]) == 0
     values = json.loads(capsys.readouterr().out)
-    assert values["radiation_temperature_range_k"] == pytest.approx([25.0, 9000.0])
+    assert values["radiation_temperature_range_k"] == pytest.approx([27.5, 9000.0])
     assert values["certificate"] is None
     table = str(folder / "t.h5")
     Path(table).write_bytes(distilled.read_bytes())
