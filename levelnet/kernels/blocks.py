@@ -76,14 +76,16 @@ def _factor_triangle(
 
 
 @kernel
-def _product_at(p: int) -> tuple[int, int]:
+def _product_at(p: int, halves: bool) -> tuple[int, int]:
     """Column from which a panel takes its product, and how many columns share it.
 
     What stands to the left of a wide panel enters for all of its columns at once; then what stands
     within it, for all of a middle one; then the rest. Most of the work is done in large products.
+    With `halves` wide panels share theirs too, half of what is left at a time.
     """
     if p % WIDE == 0:
-        return 0, WIDE
+        half = p & -p  # the largest power of two in p
+        return (p - half, max(half, WIDE)) if halves else (0, WIDE)
     if p % _MIDDLE == 0:
         return p - p % WIDE, _MIDDLE
     return p - p % _MIDDLE, PANEL
@@ -94,7 +96,7 @@ def _cholesky(blas: IntArray, side: int, square: FloatArray, inverse: FloatArray
     """Factor a square in place, and invert the triangles on its diagonal; False if it cannot be."""
     a = square.ctypes.data
     for p in range(0, side, PANEL):
-        left, reach = _product_at(p)
+        left, reach = _product_at(p, False)
         own = _at(a, p * side + p)
         if p > left:
             rows = _at(a, left * side + p)
@@ -124,7 +126,7 @@ def _divide(
     """Rows <- rows L^-T, with the inverses of the triangles on the diagonal of L."""
     a, x = square.ctypes.data, rows.ctypes.data
     for p in range(0, side, PANEL):
-        left, reach = _product_at(p)
+        left, reach = _product_at(p, True)
         own = _at(x, p)
         if p > left:
             sizes = (_NO, _NO, min(reach, side - p), n_rows, p - left)
