@@ -24,10 +24,8 @@ from .compile import inlined, kernel
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
 
-# Side of the triangles that are inverted, and of the panels over which their products are gathered:
-# measured at block sizes 50 to 1000.
-PANEL = 8
-_MIDDLE, WIDE = 32, 128
+# Sides of the triangles that are inverted, and of wider panels: measured at sizes 50 to 1000.
+PANEL, _MIDDLE, WIDE = 8, 32, 128
 SMALL = 20  # up to here plain loops beat a call
 _NO, _TRANSPOSED = np.uint8(ord("N")), np.uint8(ord("T"))
 _LOWER, _LEFT, _RIGHT = np.uint8(ord("L")), np.uint8(ord("L")), np.uint8(ord("R"))
@@ -81,7 +79,7 @@ def _product_at(p: int, halves: bool) -> tuple[int, int]:
 
     What stands to the left of a wide panel enters for all of its columns at once; then what stands
     within it, for all of a middle one; then the rest. Most of the work is done in large products.
-    With `halves` wide panels share theirs too, half of what is left at a time.
+    With `halves` wide panels share theirs too.
     """
     if p % WIDE == 0:
         half = p & -p  # the largest power of two in p
@@ -254,7 +252,7 @@ def factor_blocks(
     blas : ndarray of int
         Addresses of the routines.
     first, last : int
-        Blocks to be eliminated, from `first` down to `last`; those above it have been.
+        Blocks to be eliminated, from `first` down to `last`.
     size, start, coupling_start, factor_start : ndarray of int
         As :class:`levelnet.numerics.block_system.BlockShape` has them.
     scale, weight, outflow : ndarray, shape (n_unknowns,)
