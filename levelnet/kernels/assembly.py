@@ -17,25 +17,27 @@ def _fill(
     geometric: FloatArray,
     stretch: FloatArray,
     rise: float,
+    own_shift: float,
     shift: FloatArray,
-    lean: FloatArray,
-    live: FloatArray,
+    own_factor: float,
+    factor: FloatArray,
     weight: float,
     downward: FloatArray,
     out: FloatArray,
 ) -> None:
     """Couplings of one level to a run of levels, all above (rise = -1) or all below it (rise = 1).
 
-    1/(2 sinh(x/2)) is e^(-x/2) / (1 - e^-x); with fine structure x grows by d. `lean` is e^(-d/2),
-    exact; the rest is expanded. `shift` is the level's own less the other's. No branches, and one
-    array written in each loop: the compiler gives up vector registers where it would have to tell
-    more than eight pairs of arrays apart.
+    1/(2 sinh(x/2)) is e^(-x/2) / (1 - e^-x); with fine structure x grows by d, the level's own
+    shift less the other's. Both factors together are e^(-d/2), exact, or 0; the rest is expanded.
+    No branches, and one array written in each loop: the compiler gives up vector registers where it
+    would have to tell more than eight pairs of arrays apart.
     """
     for j in range(out.shape[0]):
         # What fine structure does to 1/(1 - e^-x): e^-a, a^3 and more left out. Shifts are 1e-4 of
         # the distance to the next shell or less, and a no larger.
-        a = rise * stretch[j] * shift[j]
-        out[j] = strength[j] * geometric[j] * lean[j] * (1.0 - a * (1.0 - 0.5 * a)) * live[j]
+        a = rise * stretch[j] * (own_shift - shift[j])
+        expanded = 1.0 - a * (1.0 - 0.5 * a)
+        out[j] = strength[j] * geometric[j] * (own_factor * factor[j]) * expanded
     for j in range(out.shape[0]):
         downward[j] += out[j] * weight
 
@@ -80,9 +82,9 @@ def geometric_means(
     n_blocks = first_n.shape[0]
     upward[:] = 0.0
     downward[:] = 0.0
-    relative, lean = np.empty(top + 1), np.empty(top + 1)
-    half = np.exp(-0.5 * shift)
-    whole = 1.0 / half
+    # What leans a line up or down: e^(-d/2) of one end times that of the other, 0 for idle levels.
+    down = np.exp(-0.5 * shift) * live
+    up = np.exp(0.5 * shift) * live
     for l in range(n_blocks - 1):
         low, columns = first_n[l + 1], top - l - 1
         above = top + 1 - low
@@ -91,30 +93,22 @@ def geometric_means(
             i = start[l] + n - first_n[l]
             row = strength_start[l] + (n - l - 1) * columns + low - l - 2
             begin = coupling_start[l] + (n - first_n[l]) * above
-            for j in range(above):
-                relative[j] = shift[i] - shift[first + j]
             middle = min(max(n - low, 0), above)
-            for j in range(middle):
-                lean[j] = half[i] * whole[first + j]
-            for j in range(middle, above):
-                lean[j] = whole[i] * half[first + j]
             for a, b, rise in ((0, middle, 1.0), (middle, above, -1.0)):
                 _fill(
                     strength[row + a : row + b],
                     geometric[n, low + a : low + b],
                     stretch[n, low + a : low + b],
                     rise,
-                    relative[a:b],
-                    lean[a:b],
-                    live[first + a : first + b],
-                    root_weight[i] * live[i],
+                    shift[i],
+                    shift[first + a : first + b],
+                    down[i] if rise > 0.0 else up[i],
+                    (up if rise > 0.0 else down)[first + a : first + b],
+                    root_weight[i],
                     downward[first + a : first + b],
                     coupling[begin + a : begin + b],
                 )
-            own = coupling[begin : begin + above]
-            for j in range(above):
-                own[j] *= live[i]
-            upward[i] = _dot(own, root_weight[first : first + above])
+            upward[i] = _dot(coupling[begin : begin + above], root_weight[first : first + above])
 
 
 @kernel
