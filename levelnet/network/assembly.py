@@ -208,7 +208,8 @@ def factor_interior(
     radiation_temperature_k : float, K
         T_r, above 0.
     workspace : Workspace, optional
-        Buffers to reuse; the result refers to them until they are used again.
+        Buffers to reuse; the result refers to them until they are used again. Below COLD_K, where
+        they are of no use, their memory is given back.
 
     Returns
     -------
