@@ -6,6 +6,7 @@ import os
 import re
 import stat
 import tomllib
+from collections.abc import Iterator
 from pathlib import Path
 from typing import Any, BinaryIO
 
@@ -18,15 +19,19 @@ MOST_PARTS = 32
 # No file needs more than a hundred keys; the parser takes a kilobyte for a table, a microsecond or
 # two for a mark (a number in a list has up to three), and a hundred bytes for a letter of a number.
 _MOST_KEYS, _MOST_MARKS, _LONGEST_WORD = 10_000, 2_000_000, 1000
-# What decides how TOML nests: strings and comments whole, then marks outside them, or a quote that
-# begins no whole string; words that are too long. The repeats give nothing back: each letter is
-# seen once.
+# What decides how TOML nests: marks outside strings and comments; words that are too long. Each
+# pattern sees a letter once and gives nothing back.
 _MARKS = re.compile(
-    r""""{3}(?:[^"\\]++|\\.|"(?!""))*+"{3,5}|'{3}.*?'{3,5}"""
-    r"""|"(?!"")(?:[^"\\\n]++|\\.)*+"|'(?!'')[^'\n]*+'|\#[^\n]*+|[].=,\n[{}"']"""
-    rf"|(?<![\w-])[\w-]{{{_LONGEST_WORD}}}",
-    re.DOTALL,
+    r"""\"{3}|'{3}|["']|\#[^\n]*|[].=,\n[{}]"""
+    rf"|(?<![\w-])[\w-]{{{_LONGEST_WORD}}}"
 )
+# What may end a string, by what begins it; a letter behind a backslash does not.
+_ENDS = {
+    '"""': re.compile(r"\\.|\"{3,5}", re.DOTALL),
+    "'''": re.compile(r"'{3,5}"),
+    '"': re.compile(r'\\.|["\n]', re.DOTALL),
+    "'": re.compile(r"['\n]"),
+}
 _UNITS = ((1_000_000, "MB"), (1000, "kB"), (1, "bytes"))
 
 
@@ -119,20 +124,40 @@ def parse_toml(text: str, where: str) -> dict[str, Any]:
     return values
 
 
+def _marks(text: str) -> Iterator[tuple[int, str]]:
+    """Marks outside strings, with their places, up to a string that has no end."""
+    found = _MARKS.search(text)
+    while found:
+        start, end = found.span()
+        yield start, found[0]
+        if found[0] in _ENDS:
+            after = _end_of_string(text, end, found[0])
+            if after is None:
+                return  # the parser will complain of it
+            end = after
+        found = _MARKS.search(text, end)
+
+
+def _end_of_string(text: str, start: int, quotes: str) -> int | None:
+    """Where what begins with `quotes` is over; None where it is not on its line, or never."""
+    for found in _ENDS[quotes].finditer(text, start):
+        if found[0] == "\n":
+            return None
+        if not found[0].startswith("\\"):
+            return found.end()
+    return None
+
+
 def _check_marks(text: str, where: str) -> None:
     """Refuse TOML that nests too deeply or is too much, as far as the parser will get."""
     dots = depth = keys = 0
-    for count, found in enumerate(_MARKS.finditer(text)):
-        start, end = found.span()
-        mark = text[start]
-        if end == start + 1 and mark in "\"'":
-            return  # the parser will complain of it
+    for count, (start, mark) in enumerate(_marks(text)):
         if mark == ".":
             dots += 1
-        elif mark.isalnum() or mark in "_-":
-            word = cut_short(text[start:end])
+        elif mark[0].isalnum() or mark[0] in "_-":
+            word = cut_short(mark)
             raise InputError(f"{where}: {word}: over {_LONGEST_WORD} characters in a key or number")
-        elif mark not in "\"'#":  # a part of a key may be quoted
+        elif mark[0] not in "\"'#":  # a part of a key may be quoted
             dots = 0
             depth += (mark in "[{") - (mark in "]}")
             keys += mark == "=" or (mark == "[" and depth == 1)
