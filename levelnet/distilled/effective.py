@@ -118,13 +118,15 @@ def effective_rates(
     n = len(atom.kept)
     capture, photo = np.empty((2, *radiation.shape, n))
     exchange = np.empty((*radiation.shape, n, n))
-    for temperature_k in np.unique(radiation).tolist():
-        here = radiation == temperature_k
-        node = compute_node(atom, temperature_k)["node"]
-        capture[here] = log_capture(constants, node, matter[here])
-        photo[here] = log_photo(constants, node, temperature_k)
-        exchange[here] = log_exchange(constants, node[: len(constants.lower)], temperature_k)
-    drop_buffers()
+    try:
+        for temperature_k in np.unique(radiation).tolist():
+            here = radiation == temperature_k
+            node = compute_node(atom, temperature_k)["node"]
+            capture[here] = log_capture(constants, node, matter[here])
+            photo[here] = log_photo(constants, node, temperature_k)
+            exchange[here] = log_exchange(constants, node[: len(constants.lower)], temperature_k)
+    finally:
+        drop_buffers()
     return _scaled(ladder.kept, capture, photo, exchange, factor)
 
 

@@ -100,11 +100,13 @@ class _Buffers(threading.local):
     workspace: Workspace | None = None
 
     def of(self, atom: Atom, ladder: Ladder) -> Workspace:
+        """Give those of this atom, new ones where the last was another."""
         if self.workspace is None or self.atom != atom:
             self.atom, self.workspace = atom, Workspace.of(ladder)
         return self.workspace
 
     def drop(self) -> None:
+        """Give the memory back."""
         self.atom = self.workspace = None
 
 
