@@ -143,7 +143,7 @@ def integrate(  # noqa: PLR0913 (each is a choice of the caller)
     start: float,
     state: FloatArray,
     outputs: Sequence[float],
-    tolerance: float | FloatArray | Callable[[FloatArray], FloatArray],
+    tolerance: float | FloatArray | Callable[[float, FloatArray], FloatArray],
     *,
     first_step: float,
     max_steps: int,
@@ -164,7 +164,7 @@ def integrate(  # noqa: PLR0913 (each is a choice of the caller)
         Ascending times, all above `start`; steps end on each exactly.
     tolerance : float, ndarray of shape (n,), or callable
         Largest absolute local error of any variable, or of each, in one step; a callable gives it
-        from the state where the step starts.
+        from the time and the state where the step starts.
     first_step : float
         Length of the first step tried.
     max_steps : int
@@ -194,7 +194,7 @@ def integrate(  # noqa: PLR0913 (each is a choice of the caller)
             trial = (target - now) / pieces
             end = target if pieces == 1 else now + trial
             try:
-                allowed = tolerance(y) if callable(tolerance) else tolerance
+                allowed = tolerance(now, y) if callable(tolerance) else tolerance
                 if here is None:
                     here, evaluations = linearize(now, y), evaluations + 1
                 new, error = rosenbrock_step(rate, here, now, y, end - now)
