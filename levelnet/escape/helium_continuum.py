@@ -12,7 +12,7 @@ from ..arrays import FloatArray
 from ..background.conditions import Conditions
 from ..errors import InputError
 from .helium_lines import HeliumGroundLines
-from .helium_profile import LARGEST_DAMPING, continuum_escape, diffusive_escape
+from .helium_profile import LARGEST_DAMPING, continuum_escapes, diffusive_escape
 from .helium_treatment import Chances, HeliumSobolev, HeliumSobolevFeedback, HeliumTreatment
 
 Redistribution = Literal["doppler", "complete", "partial"]
@@ -102,7 +102,7 @@ class HeliumContinuum(HeliumTreatment):
         shape = self._shapes(lines, conditions)
         continuum = per_log * width
         columns = np.stack([optical_depth, continuum, shape.damping, shape.incoherent], axis=1)
-        found = np.array([self._chance(*one) for one in columns.tolist()]).reshape(-1, 5).T
+        found = self._chances(columns).T
         value, by_depth, by_continuum, by_damping, by_incoherent = found
         by_shape, by_ground, by_others = (
             by_damping * shape.damping_slopes + by_incoherent * shape.incoherent_slopes
@@ -118,21 +118,19 @@ class HeliumContinuum(HeliumTreatment):
             value, by_depth, by_continuum, by_temperature, validity, by_ground, by_others
         )
 
-    def _chance(
-        self,
-        depth: float,
-        continuum: float,
-        damping: float,
-        incoherent: float,
-    ) -> tuple[float, ...]:
-        """P of one line, its derivatives by ln tau and ln c, by damping and incoherent fraction."""
-        natural = damping / incoherent
-        if not self.diffusion or depth * incoherent < _THICK or natural > LARGEST_DAMPING:
-            plain = continuum_escape(depth, continuum, damping)
-            return (*plain, 0.0)
-        moved, by_incoherent = diffusive_escape(depth, continuum, natural, incoherent)
-        by_damping = moved.by_damping / incoherent
-        return (*moved[:3], by_damping, by_incoherent - by_damping * natural)
+    def _chances(self, columns: FloatArray) -> FloatArray:
+        """P of each line, its derivatives by ln tau and ln c, by damping and incoherent fraction.
+
+        `columns`, shape (n_lines, 4), are tau, c, damping and incoherent fraction.
+        """
+        found = np.zeros((len(columns), 5))
+        found[:, :4] = continuum_escapes(columns[:, :3].copy())
+        if self.diffusion:
+            for line, (depth, continuum, damping, incoherent) in enumerate(columns.tolist()):
+                natural = damping / incoherent
+                if depth * incoherent >= _THICK and natural <= LARGEST_DAMPING:
+                    found[line] = _diffusing(depth, continuum, natural, incoherent)
+        return found
 
     def _shapes(self, lines: HeliumGroundLines, conditions: Conditions) -> _Shapes:
         radiation_k = conditions.radiation_temperature_k
@@ -152,6 +150,15 @@ class HeliumContinuum(HeliumTreatment):
         beyond = damping > LARGEST_DAMPING
         damping, by = np.where(beyond, LARGEST_DAMPING, damping), np.where(beyond, 0.0, by)
         return _Shapes(damping, by, incoherent, turns)
+
+
+def _diffusing(
+    depth: float, continuum: float, natural: float, incoherent: float
+) -> tuple[float, ...]:
+    """P of a line with diffusion and its derivatives, that by damping at given fraction."""
+    moved, by_incoherent = diffusive_escape(depth, continuum, natural, incoherent)
+    by_damping = moved.by_damping / incoherent
+    return (*moved[:3], by_damping, by_incoherent - by_damping * natural)
 
 
 def doppler_width(temperature_k: float) -> float:

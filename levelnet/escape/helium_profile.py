@@ -17,18 +17,20 @@ from scipy.special import dawsn
 
 from ..arrays import FloatArray
 from ..errors import InputError
-from ..kernels.continuum_escape import escape_with_continuum
+from ..kernels.continuum_escape import (
+    FARTHEST,
+    SCALE,
+    cells_to,
+    escape_of_lines,
+    reach_of_line,
+)
 from ..kernels.diffusive_escape import escape_with_diffusion
 
-# y = SCALE sinh(u) on cells uniform in u and on cells twice as wide, the two extrapolated (order 2
-# to order 4); up to this many Doppler widths.
-_SCALE, _STEP, _FARTHEST = 2.0, 1.0 / 36.0, 1e12
-# The grid ends where the wing beyond has this depth, and not before so many widths; with a
-# continuum, this factor beyond where it takes over.
-_TAIL_DEPTH, _NEAREST, _FAR = 1e-5, 30.0, 300.0
+# Cells in a unit of u: twice as wide ones, and these, are extrapolated (order 2 to order 4).
+_PER_UNIT = 36
 _ASYMPTOTIC = 12.0
 # Cells in u with diffusion: of first order where that has ceased.
-_DIFFUSIVE_STEP = 1.0 / 80.0
+_DIFFUSIVE_PER_UNIT = 80
 LARGEST_DAMPING = 0.03
 """Series of the profile to the third power of the damping: within 1e-6 up to here."""
 
@@ -92,11 +94,32 @@ def continuum_escape(depth: float, continuum: float, damping: float) -> Chance:
         )
     if not 0.0 <= damping <= LARGEST_DAMPING:
         raise InputError(f"damping = {damping:g}: allowed are 0 to {LARGEST_DAMPING:g}")
-    half = _half(_reach(depth, continuum, damping), 2.0 * _STEP)
-    coarse, fine = np.empty((2, 4))
-    escape_with_continuum(depth, continuum, damping, half, _cells(2.0 * _STEP), coarse)
-    escape_with_continuum(depth, continuum, damping, 2 * half, _cells(_STEP), fine)
-    return Chance(*((4.0 * fine - coarse) / 3.0).tolist())
+    return Chance(*continuum_escapes(np.array([[depth, continuum, damping]]))[0].tolist())
+
+
+def continuum_escapes(columns: FloatArray) -> FloatArray:
+    """Give the same for many lines at once; dampings must be in range.
+
+    Parameters
+    ----------
+    columns : ndarray, shape (n_lines, 3), dimensionless
+        Depth, continuum and damping of each line.
+
+    Returns
+    -------
+    ndarray, shape (n_lines, 4), dimensionless
+        The parts of Chance.
+
+    Raises
+    ------
+    InputError
+        If a depth is not a number.
+    """
+    found = np.empty((len(columns), 4))
+    half = _PER_UNIT // 2
+    if escape_of_lines(columns, half, _cells(half), _cells(_PER_UNIT), found):
+        raise InputError("optical depth of a line or of the continuum inside it: not a number")
+    return found
 
 
 def diffusive_escape(
@@ -131,9 +154,9 @@ def diffusive_escape(
     Hirata & Switzer 2008, Phys. Rev. D 77, 083007 (coherent scattering in He I lines; from memory);
     Rybicki & dell'Antonio 1994, Astrophys. J. 427, 603 (diffusion; from memory).
     """
-    reach = _reach(depth, continuum, damping * incoherent)
-    half = _half(reach, _DIFFUSIVE_STEP)
-    cells, out = _cells(_DIFFUSIVE_STEP), np.empty(5)
+    reach = reach_of_line(depth, continuum, damping * incoherent)
+    half = cells_to(reach, _DIFFUSIVE_PER_UNIT)
+    cells, out = _cells(_DIFFUSIVE_PER_UNIT), np.empty(5)
     line = np.array([depth, continuum, damping, incoherent])
     escape_with_diffusion(line, half, cells, np.empty((8, 2 * half)), out)
     left = 1.0 - (1.0 - incoherent) * out[0] / (incoherent * depth)
@@ -152,30 +175,13 @@ def diffusive_escape(
     )
 
 
-def _reach(depth: float, continuum: float, damping: float) -> float:
-    """Doppler widths to where nothing changes any more.
-
-    There the wing beyond is thin; or the continuum, which has long forgotten the blue side, is so
-    much thicker than the line that h = 1.
-    """
-    wing = damping * depth / math.pi  # tau phi y^2
-    reach = wing / _TAIL_DEPTH
-    if continuum > 0.0:
-        reach = min(reach, _FAR * max(math.sqrt(wing / continuum), 1.0 / continuum))
-    return min(max(reach, _NEAREST), _FARTHEST)
-
-
-def _half(reach: float, step: float) -> int:
-    """Cells on each side, in whole units of u, so that the end of the grid rarely moves."""
-    return round(math.ceil(math.asinh(reach / _SCALE)) / step)
-
-
 @functools.cache
-def _cells(step: float) -> FloatArray:
+def _cells(per_unit: int) -> FloatArray:
     """Widths, and the series of the normalized profile times them; shape (n_cells, 5)."""
-    count = _half(_FARTHEST, step) + 2
+    step = 1.0 / per_unit
+    count = cells_to(FARTHEST, per_unit) + 2
     u = (np.arange(count) + 0.5) * step
-    y, width = _SCALE * np.sinh(u), _SCALE * np.cosh(u) * step
+    y, width = SCALE * np.sinh(u), SCALE * np.cosh(u) * step
     core, wing = np.exp(-(y**2)), _wing(y)
     series = np.stack([core, wing[0], (1.0 - 2.0 * y**2) * core, wing[1]], axis=1)
     cells = np.empty((count, 5))

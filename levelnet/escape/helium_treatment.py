@@ -125,25 +125,38 @@ class HeliumTreatment:
         )
         chance = self.escape(lines, conditions, depth, seen.neutral_hydrogen_cm3)
         rate = lines.einstein_a_per_s * inverse
-        loss, column, heat, continuum = np.zeros((4, len(kept)))
-        # Two lines may share an upper level: 2 3P1 and 2 3P2.
-        np.add.at(loss, lines.upper, rate * chance.value)
-        np.add.at(column, lines.upper, rate * chance.by_depth)
-        np.add.at(continuum, lines.upper, rate * chance.by_continuum)
         # d ln(1+f)/d ln T = x f.
-        warm = exponent * np.exp(-exponent) * inverse
-        np.add.at(heat, lines.upper, rate * (chance.by_temperature + chance.value * warm))
-        boltzmann = np.exp(log_boltzmann_populations(kept, radiation_k, conditions.ground_fraction))
+        warm = chance.value * exponent * np.exp(-exponent) * inverse
+        by_line = rate * np.stack(
+            [chance.value, chance.by_depth, chance.by_temperature + warm, chance.by_continuum]
+        )
         validity = {
             "optical_depth": depth,
             "escape_probability": chance.value,
             **chance.validity,
         }
-        coupling = blackbody_coupling(loss, column, heat, boltzmann, validity)
-        coupling = replace(coupling, slope_continuum=np.diag(continuum))
-        if seen.blue is None:
-            return coupling
-        return _lit(coupling, lines, kept, conditions, seen.blue)
+        log_boltzmann = log_boltzmann_populations(kept, radiation_k, conditions.ground_fraction)
+        lift = None
+        if seen.blue is not None:
+            more, lift = _lit(lines, kept, radiation_k, depth, log_boltzmann, seen.blue)
+            by_line[:3] += more
+            validity["log_blue_side"] = seen.blue.log_distortion
+        # Two lines may share an upper level: 2 3P1 and 2 3P2.
+        onto = np.equal.outer(lines.upper, np.arange(len(kept))).astype(float)
+        loss, column, heat, continuum = by_line @ onto
+        coupling = blackbody_coupling(loss, column, heat, np.exp(log_boltzmann), validity)
+        if lift is None:
+            return replace(coupling, slope_continuum=np.diag(continuum))
+        source, ground, time, between = lift @ onto
+        return replace(
+            coupling,
+            source=coupling.source + source,
+            slope_continuum=np.diag(continuum),
+            excess_source=source,
+            excess_by_ground=ground,
+            excess_by_time=time,
+            excess_by_continuum=between,
+        )
 
     def escape(
         self,
@@ -159,50 +172,41 @@ class HeliumTreatment:
 
 
 def _lit(
-    plain: GroundCoupling,
     lines: HeliumGroundLines,
     kept: KeptLevels,
-    conditions: Conditions,
+    radiation_temperature_k: float,
+    depth: FloatArray,
+    log_boltzmann: FloatArray,
     blue: HeliumBlueSide,
-) -> GroundCoupling:
-    """Add what the distortion on the blue sides does: A S f (u - 1)(x_u - g x_l)."""
-    upper, radiation_k = lines.upper, conditions.radiation_temperature_k
-    exponent = lines.energy_ev / (const.BOLTZMANN_EV_K * radiation_k)
+) -> tuple[FloatArray, FloatArray]:
+    """Give what the distortion on the blue sides adds: A S f (u - 1)(x_u - g x_l).
+
+    Returns
+    -------
+    ndarray, shape (3, n_lines), s^-1
+        To K, and to its slopes by ln of tau and of T_r.
+    ndarray, shape (4, n_lines), s^-1
+        The excess source; its slopes by ln of the ground population, by ln a with the populations
+        held, and by ln n_HI between the lines.
+    """
+    kt = const.BOLTZMANN_EV_K * radiation_temperature_k
+    exponent, log_distortion = lines.energy_ev / kt, blue.log_distortion
     inverse = 1.0 / -np.expm1(-exponent)
-    depth = plain.validity["optical_depth"]
-    rate, slope = lines.einstein_a_per_s * escape_probability(depth), escape_slope(depth)
+    slope = escape_slope(depth)
+    rate = lines.einstein_a_per_s * escape_probability(depth)
     # f (u - 1): each factor alone leaves the doubles in a cold field.
-    more = (np.exp(blue.log_distortion - exponent) - np.exp(-exponent)) * inverse
-    log_all = log_boltzmann_populations(kept, radiation_k, conditions.ground_fraction)
-    log_boltzmann = log_all[upper]
-    lit = rate * np.exp(log_boltzmann + blue.log_distortion)
+    more = rate * (np.exp(log_distortion - exponent) - np.exp(-exponent)) * inverse
+    raised = rate * np.exp(log_boltzmann[lines.upper])
+    lit = rate * np.exp(log_boltzmann[lines.upper] + log_distortion)
     lift = np.where(
-        blue.log_distortion < 1.0,
-        rate * np.exp(log_boltzmann) * np.expm1(np.minimum(blue.log_distortion, 1.0)),
-        lit - rate * np.exp(log_boltzmann),
+        log_distortion < 1.0, raised * np.expm1(np.minimum(log_distortion, 1.0)), lit - raised
     )
-    loss, column, heat, source, ground, time, continuum = np.zeros((7, len(kept)))
-    np.add.at(loss, upper, rate * more)
-    np.add.at(column, upper, rate * more * slope)
-    np.add.at(heat, upper, rate * more * exponent * inverse)
-    np.add.at(source, upper, lift)
-    np.add.at(ground, upper, lift * (1.0 + slope))
     # The Boltzmann population goes by the energy of the term, the field by that of the photon.
-    excited = kept.energy_ev[upper] / (const.BOLTZMANN_EV_K * radiation_k)
+    excited = kept.energy_ev[lines.upper] / kt
     by_time = lift * (slope * (-3.0 - blue.hubble_slope) - excited) + lit * blue.slope
-    np.add.at(time, upper, by_time)
-    np.add.at(continuum, upper, lit * blue.by_continuum)
-    return replace(
-        plain,
-        loss=plain.loss + np.diag(loss),
-        source=plain.source + loss * np.exp(log_all) + source,
-        slope_column=plain.slope_column + np.diag(column),
-        slope_temperature=plain.slope_temperature + np.diag(heat),
-        excess_source=source,
-        excess_by_ground=ground,
-        excess_by_time=time,
-        excess_by_continuum=continuum,
-        validity={**plain.validity, "log_blue_side": blue.log_distortion},
+    return (
+        np.stack([more, more * slope, more * exponent * inverse]),
+        np.stack([lift, lift * (1.0 + slope), by_time, lit * blue.by_continuum]),
     )
 
 

@@ -19,14 +19,43 @@ from .compile import kernel
 FloatArray = NDArray[np.float64]
 
 
+# The grid ends where the wing beyond has this depth, and not before so many Doppler widths; with a
+# continuum, this factor beyond where it takes over; and never farther than the last.
+_TAIL_DEPTH, _NEAREST, _FAR, FARTHEST = 1e-5, 30.0, 300.0, 1e12
+# y = SCALE sinh(u) on cells uniform in u.
+SCALE = 2.0
+
+
 @kernel
-def _mean_decay(depth: float) -> tuple[float, float]:
-    """Give q = (1 - e^-D)/D and dq/dD."""
+def reach_of_line(depth: float, continuum: float, damping: float) -> float:
+    """Doppler widths to where nothing changes any more.
+
+    There the wing beyond is thin; or the continuum, which has long forgotten the blue side, is so
+    much thicker than the line that h = 1.
+    """
+    wing = damping * depth / math.pi  # tau phi y^2
+    reach = wing / _TAIL_DEPTH
+    if continuum > 0.0:
+        reach = min(reach, _FAR * max(math.sqrt(wing / continuum), 1.0 / continuum))
+    return min(max(reach, _NEAREST), FARTHEST)
+
+
+@kernel
+def cells_to(reach: float, per_unit: int) -> int:
+    """Cells on each side, in whole units of u, so that the end of the grid rarely moves."""
+    return math.ceil(math.asinh(reach / SCALE)) * per_unit
+
+
+@kernel
+def _decay(depth: float) -> tuple[float, float, float]:
+    """Give e^-D, q = (1 - e^-D)/D and dq/dD."""
     if depth < 1e-3:
         q = 1.0 - depth * (0.5 - depth * (1.0 / 6.0 - depth / 24.0))
-        return q, -0.5 + depth * (1.0 / 3.0 - depth * (0.125 - depth / 30.0))
-    q = -math.expm1(-depth) / depth
-    return q, (math.exp(-depth) - q) / depth
+        q_by = -0.5 + depth * (1.0 / 3.0 - depth * (0.125 - depth / 30.0))
+        return 1.0 - depth * q, q, q_by
+    lost = -math.expm1(-depth)
+    q = lost / depth
+    return 1.0 - lost, q, (1.0 - lost - q) / depth
 
 
 @kernel
@@ -43,8 +72,7 @@ def _cell(depths: FloatArray, mass: float, mass_by: float, h: FloatArray, out: F
     total = line + continuum
     share = continuum / total if total > 0.0 else 0.0
     turn = share * (line / total) if total > 0.0 else 0.0
-    decay = math.exp(-total)
-    q, q_by = _mean_decay(total)
+    decay, q, q_by = _decay(total)
     over = h[0] - share
     mean = share + over * q
     # By ln tau, ln c and a: of the share and of the depth.
@@ -109,4 +137,41 @@ def escape_with_continuum(
             depths[1] = c * cells[i, 0]
         mass /= total
         _cell(depths, mass, by / total - mass * total_by / total, h, out)
+    return 0
+
+
+@kernel
+def escape_of_lines(
+    columns: FloatArray, per_unit: int, coarse: FloatArray, fine: FloatArray, out: FloatArray
+) -> int:
+    """Escape probability of each line: from two grids, extrapolated from order 2 to order 4.
+
+    Parameters
+    ----------
+    columns : ndarray, shape (n_lines, 3), dimensionless
+        tau, c and a of each line.
+    per_unit : int
+        Cells of the coarse grid in a unit of u; the fine grid has twice as many.
+    coarse, fine : ndarray, shape (n_cells, 5)
+        As for :func:`escape_with_continuum`.
+    out : ndarray, shape (n_lines, 4)
+        As there.
+
+    Returns
+    -------
+    int
+        0; 1 if a depth is not a number, or a line reaches beyond the cells.
+    """
+    wide = np.empty(4)
+    for line in range(columns.shape[0]):
+        tau, c, a = columns[line, 0], columns[line, 1], columns[line, 2]
+        if not tau + c >= 0.0:
+            return 1
+        half = cells_to(reach_of_line(tau, c, a), per_unit)
+        if escape_with_continuum(tau, c, a, half, coarse, wide):
+            return 1
+        if escape_with_continuum(tau, c, a, 2 * half, fine, out[line]):
+            return 1
+        for k in range(4):
+            out[line, k] = (4.0 * out[line, k] - wide[k]) / 3.0
     return 0

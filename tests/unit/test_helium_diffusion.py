@@ -111,6 +111,6 @@ def test_derivatives_are_those_of_the_value(line: tuple[float, float, float, flo
 
 
 def test_the_kernel_refuses_what_does_not_fit() -> None:
-    cells, out = helium_profile._cells(1.0 / 36.0), np.empty(5)
+    cells, out = helium_profile._cells(36), np.empty(5)
     line = np.array([1e6, 0.1, 1e-3, 1e-2])
     assert escape_with_diffusion(line, 10, cells, np.empty((8, 19)), out) == 1

@@ -11,7 +11,7 @@ from scipy.special import voigt_profile
 
 from levelnet.errors import InputError
 from levelnet.escape import helium_profile
-from levelnet.escape.helium_profile import continuum_escape
+from levelnet.escape.helium_profile import continuum_escape, continuum_escapes
 from levelnet.kernels.continuum_escape import escape_with_continuum
 
 DEPTHS = (1e-12, 1e-3, 0.7, 2.0, 30.0, 1e4, 2e7, 1e12)
@@ -25,7 +25,7 @@ DAMPINGS = (0.0, 5e-6, 2e-3, 0.03)
 )
 def test_profile_is_that_of_scipy(damping: float, tolerance: float) -> None:
     step = 1.0 / 36.0
-    cells = helium_profile._cells(step)
+    cells = helium_profile._cells(36)
     y = 2.0 * np.sinh((np.arange(len(cells)) + 0.5) * step)
     series = cells[:, 1:] @ damping ** np.arange(4) / cells[:, 0]
     expected = voigt_profile(y, math.sqrt(0.5), damping)
@@ -153,5 +153,19 @@ def test_wrong_input(wrong: tuple[float, float, float]) -> None:
 
 
 def test_the_kernel_refuses_more_cells_than_there_are() -> None:
-    cells, out = helium_profile._cells(1.0 / 36.0), np.empty(4)
+    cells, out = helium_profile._cells(36), np.empty(4)
     assert escape_with_continuum(1.0, 0.0, 0.0, len(cells) + 1, cells, out) == 1
+
+
+def test_many_lines_at_once_are_the_same_bits() -> None:
+    lines = [(t, c, a) for t in DEPTHS for c in (0.0, 1e-6, 0.1, 30.0) for a in DAMPINGS]
+    found = continuum_escapes(np.array(lines))
+    np.testing.assert_array_equal(found, [continuum_escape(*one) for one in lines])
+
+
+@pytest.mark.parametrize("place", [0, 1])
+def test_a_depth_that_is_not_a_number_is_refused(place: int) -> None:
+    columns = np.array([[1.0, 0.1, 1e-3], [1.0, 0.1, 1e-3]])
+    columns[1, place] = math.nan
+    with pytest.raises(InputError, match="not a number"):
+        continuum_escapes(columns)
