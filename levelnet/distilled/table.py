@@ -245,9 +245,11 @@ class EffectiveTable:
         """Give the table of He I or He II; InputError where there is none."""
         stage = self.helium if atom == "He I" else self.helium_ion
         if stage is None:
-            asked = 'helium.helium_ion = "network"' if self.helium else "helium.n_max = 2 or above"
+            asked = 'helium.helium_ion = "network"'
+            if self.helium is None:
+                asked = "helium.n_max = 2 or above, in a universe with helium"
             raise InputError(
-                f'atom = "{atom}": this table holds no rates of it; distil the setup with {asked}'
+                f'atom = "{atom}": this table holds no rates of it; distil a setup with {asked}'
             )
         return stage
 
