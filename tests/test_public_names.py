@@ -88,6 +88,7 @@ SIGNATURES = {
         "radiation_temperature_k": ...,
         "matter_temperature_k": ...,
         "kept": None,
+        "atom": "H I",
     },
     "distill": {"setup": ...},
     "history_from_table": {"table": ..., "cosmology": ...},

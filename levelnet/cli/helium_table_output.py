@@ -10,6 +10,7 @@ if TYPE_CHECKING:
     from ..arrays import FloatArray
     from ..distilled.fast import FastHistory
     from ..distilled.table import EffectiveTable
+    from ..network.reduced import KeptLevels
 
 
 def helium_values(table: EffectiveTable) -> dict[str, Any] | None:
@@ -39,6 +40,17 @@ def helium_lines(table: EffectiveTable) -> list[str]:
     if values["n_escape_coefficients"]:
         text += f", {values['n_escape_coefficients']} of the escape"
     return [row("helium", text)]
+
+
+def kept_names(kept: KeptLevels) -> list[str]:
+    """Names of kept levels, such as 2s; of terms of He I such as 2 3P."""
+    from ..atomic.helium_levels import term_name
+    from ..distilled.about import level_names
+
+    if kept.spin is None:
+        return level_names(kept)
+    terms = zip(kept.n.tolist(), kept.l.tolist(), kept.spin.tolist(), strict=True)
+    return [term_name(*term) for term in terms]
 
 
 def fraction_values(history: FastHistory) -> dict[str, FloatArray]:

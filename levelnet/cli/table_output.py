@@ -11,15 +11,31 @@ from .helium_table_output import (
     fraction_values,
     helium_lines,
     helium_values,
+    kept_names,
 )
 from .output import aligned, atom_size, row
 
 if TYPE_CHECKING:
     from ..distilled.fast import FastHistory
+    from ..distilled.species import AtomName
+    from ..distilled.stage import StageTable
     from ..distilled.table import EffectiveTable
     from ..history.setup import Setup
 
-_SAMPLES_K = (9000.0, 6000.0, 4000.0, 3000.0, 2000.0, 1000.0, 300.0, 100.0, 30.0)
+_SAMPLES_K = (
+    25000.0,
+    18000.0,
+    13000.0,
+    9000.0,
+    6000.0,
+    4000.0,
+    3000.0,
+    2000.0,
+    1000.0,
+    300.0,
+    100.0,
+    30.0,
+)
 
 
 def table_values(table: EffectiveTable) -> dict[str, Any]:
@@ -41,6 +57,7 @@ def table_values(table: EffectiveTable) -> dict[str, Any]:
         "temperature_ratio_range": [math.exp(table.ratio_low), math.exp(table.ratio_high)],
         "cells": list(table.departure.shape[:2]),
         "n_coefficients": sum(a.size for a in (table.equilibrium, table.exchange, table.departure)),
+        "rates": rate_values(table),
         "certificate": None,
     }
     if proof is not None:
@@ -78,30 +95,66 @@ def table_summary(table: EffectiveTable) -> str:
             f"{table.tolerance:g} in each logarithm",
         ),
         "",
-        *_rate_lines(table),
+        *_rate_lines(values["rates"]),
         "",
         *_certificate_lines(values["certificate"]),
     ]
     return "\n".join(lines)
 
 
-def _rate_lines(table: EffectiveTable) -> list[str]:
-    """Logarithms to base ten at a few temperatures, T_m = T_r."""
+def rate_values(table: EffectiveTable) -> dict[str, dict[str, Any]]:
+    """Collect logarithms to base ten of the rates at a few temperatures, T_m = T_r, by atom.
+
+    Of each atom that the table holds: `temperature_k`, the names of the first kept `levels`, and
+    over both `log10_recombination_cm3_per_s` and `log10_photoionization_per_s`.
+    """
     import numpy as np
 
-    from ..distilled.about import level_names
+    from ..distilled.species import scales_of
 
-    low, high = table.radiation_range_k
-    wanted = np.array([t for t in _SAMPLES_K if low <= t <= high] or [high])
-    rates = table.effective_rates(wanted, wanted)
-    names = level_names(table.kept)[:3]
-    head = ("T_r = T_m (K)", *(f"log A_{name}" for name in names), *(f"log B_{n}" for n in names))
-    numbers = [rates.log_recombination[:, : len(names)], rates.log_photoionization[:, : len(names)]]
-    body = [
-        (f"{kelvin:g}", *(f"{value:.4f}" for value in line))
-        for kelvin, line in zip(wanted, np.hstack(numbers) / math.log(10.0), strict=True)
-    ]
-    return aligned([head, *body], right=True)
+    held: dict[AtomName, EffectiveTable | StageTable | None] = {
+        "H I": table,
+        "He I": table.helium,
+        "He II": table.helium_ion,
+    }
+    values: dict[str, dict[str, Any]] = {}
+    for name, part in held.items():
+        if part is None:
+            continue
+        unit = scales_of(table.setup, name).energy
+        low, high = (math.exp(x) * unit for x in (part.log_low, part.log_high))
+        wanted = np.array([t for t in _SAMPLES_K if low <= t <= high] or [high])
+        rates = table.effective_rates(wanted, wanted, name)
+        names = kept_names(rates.kept_levels)[: 4 if name == "He I" else 3]
+        logs = (rates.log_recombination, rates.log_photoionization)
+        capture, photo = (one[:, : len(names)] / math.log(10.0) for one in logs)
+        values[name] = {
+            "temperature_k": wanted,
+            "levels": names,
+            "log10_recombination_cm3_per_s": capture,
+            "log10_photoionization_per_s": photo,
+        }
+    return values
+
+
+def _rate_lines(rates: dict[str, dict[str, Any]]) -> list[str]:
+    """One block of lines for each atom; the name of the atom where there are several."""
+    import numpy as np
+
+    lines: list[str] = []
+    for name, one in rates.items():
+        levels = one["levels"]
+        heads = (*(f"log A_{level}" for level in levels), *(f"log B_{level}" for level in levels))
+        numbers = np.hstack(
+            [one["log10_recombination_cm3_per_s"], one["log10_photoionization_per_s"]]
+        )
+        body = [
+            (f"{kelvin:g}", *(f"{value:.4f}" for value in line))
+            for kelvin, line in zip(one["temperature_k"], numbers, strict=True)
+        ]
+        head = "T_r = T_m (K)" if len(rates) == 1 else f"{name}: T_r = T_m (K)"
+        lines += ["", *aligned([(head, *heads), *body], right=True)]
+    return lines[1:]
 
 
 def _certificate_lines(proof: dict[str, Any] | None) -> list[str]:

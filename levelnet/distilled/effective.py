@@ -9,16 +9,15 @@ import numpy as np
 from numpy.typing import ArrayLike
 
 from ..arrays import FloatArray, frozen_array
-from ..atomic.electron_grid import COLDEST_K, HOTTEST_K
-from ..atomic.physics import Scales, scales
+from ..atomic.physics import Scales
 from ..errors import RangeError
 from ..history.cost import check_memory
 from ..history.setup import Setup
 from ..network.rates import RateConstants
 from ..network.reduced import KeptLevels
 from ..network.scaled import scaled_levels
-from .kept import choose_kept
-from .nodes import Atom, compute_node, drop_buffers, prepared
+from .nodes import drop_buffers
+from .species import MATTER_K, RADIATION_K, atom_name, eliminated, scales_of
 
 NEVER = -700.0
 """Stands for the logarithm of an exchange rate that is exactly zero, in nodes and tables."""
@@ -31,7 +30,7 @@ class EffectiveRates:
     Attributes
     ----------
     kept_levels : KeptLevels
-        The kept levels, in ascending order of n and l.
+        The kept levels, in ascending order of n and l; of He I by energy, each with its spin.
     log_recombination : ndarray, shape (..., n_kept)
         ln of A_i in cm^3 s^-1: recombination into level i, directly or through eliminated levels,
         stimulated part included.
@@ -74,60 +73,68 @@ def effective_rates(
     setup: Setup,
     radiation_temperature_k: ArrayLike,
     matter_temperature_k: ArrayLike,
-    kept: Iterable[tuple[int, int]] | None = None,
+    kept: Iterable[tuple[int, ...]] | None = None,
+    atom: str = "H I",
 ) -> EffectiveRates:
     """Effective rates of the kept levels, by exact elimination of all others.
 
     Parameters
     ----------
     setup : Setup
-        The atom (``hydrogen``), its open lines (``lines``), changed constants (``physics``) and
-        overrides of lines and cross sections (``rates``).
+        The atom (``hydrogen``; of helium ``helium``), its open lines (``lines``), changed constants
+        (``physics``) and overrides of lines and cross sections (``rates``).
     radiation_temperature_k, matter_temperature_k : array_like, K
-        0.02 to 1e5 K over the factor by which changed constants scale energies; broadcast. One
-        factorization for each different T_r.
-    kept : iterable of (n, l), optional
-        Levels to keep. They must contain 2s, 2p and every np whose Lyman line is open; that set is
-        the default. An np beyond it is kept without a line to the ground state.
+        Broadcast; one factorization for each different T_r. Hydrogen: 0.02 to 1e5 K; He I: T_r 50
+        to 1e5 K, T_m 0.02 to 1e5 K; He II: 0.08 to 4e5 K; all times the factor by which changed
+        constants scale energies.
+    kept : iterable of (n, l), of He I (n, l, spin), optional
+        Levels to keep. They must contain those that talk to the ground state, which are the
+        default: of hydrogen 2s, 2p and every np whose Lyman line is open; of He I 2 1S, 2 1P, 2 3S,
+        2 3P and every n 1P whose line is open (``lines.helium_higher_lines``); of He II 2s and 2p.
+        An np beyond them is kept without a line to the ground state.
+    atom : "H I", "He I" or "He II"
+        Whose rates; of helium where it has levels (``helium.n_max``), whether there is any in the
+        universe of the setup or not. Those of He II do not hang on ``helium.helium_ion``.
 
     Returns
     -------
     EffectiveRates
-        Rates and their logarithms, which stay finite where the rates leave the doubles.
+        Rates and their logarithms, which stay finite where the rates leave the doubles. Per atom;
+        of He I the recombining ion is He II, of He II it is He III.
 
     Raises
     ------
     InputError
-        For kept levels that do not exist or do not suffice, an atom that does not fit in memory,
-        and (RangeError) temperatures out of range.
+        For an atom without levels, kept levels that do not exist or do not suffice, an atom that
+        does not fit in memory, and (RangeError) temperatures out of range.
 
     References
     ----------
     Ali-Haimoud & Hirata 2010, Phys. Rev. D 82, 063521; Burgin 2009, Bull. Lebedev Phys. Inst. 36,
     110.
     """
-    atom = Atom.of(setup.hydrogen, choose_kept(setup, kept), setup.rates.network)
-    factor = scales(setup.physics)
+    name = atom_name(atom)
+    build, factor = eliminated(setup, kept, name), scales_of(setup, name)
     radiation, matter = np.broadcast_arrays(
-        _temperature("radiation_temperature_k", radiation_temperature_k, factor.energy),
-        _temperature("matter_temperature_k", matter_temperature_k, factor.energy),
+        _temperature("radiation_temperature_k", radiation_temperature_k, factor, RADIATION_K[name]),
+        _temperature("matter_temperature_k", matter_temperature_k, factor, MATTER_K[name]),
     )
-    coldest_k = float(radiation.min(initial=np.inf))
-    check_memory(setup, populations=0, coldest_k=coldest_k)
-    ladder, _, constants = prepared(atom)
-    n = len(atom.kept)
+    if name == "H I":  # the largest helium takes less than is kept in reserve
+        check_memory(setup, populations=0, coldest_k=float(radiation.min(initial=np.inf)))
+    source = build()
+    constants, n = source.constants, len(source.kept)
     capture, photo = np.empty((2, *radiation.shape, n))
     exchange = np.empty((*radiation.shape, n, n))
     try:
         for temperature_k in np.unique(radiation).tolist():
             here = radiation == temperature_k
-            node = compute_node(atom, temperature_k)["node"]
+            node = source.node(temperature_k)
             capture[here] = log_capture(constants, node, matter[here])
             photo[here] = log_photo(constants, node, temperature_k)
             exchange[here] = log_exchange(constants, node[: len(constants.lower)], temperature_k)
     finally:
         drop_buffers()
-    return _scaled(ladder.kept, capture, photo, exchange, factor)
+    return _scaled(source.kept, capture, photo, exchange, factor)
 
 
 def log_capture(
@@ -178,15 +185,16 @@ def _scaled(
     )
 
 
-def _temperature(name: str, value: ArrayLike, unit: float) -> FloatArray:
-    """Temperatures over the scale of energies; RangeError outside the range of the rules."""
-    given = np.asarray(value, float)
+def _temperature(
+    name: str, value: ArrayLike, factor: Scales, allowed_k: tuple[float, float]
+) -> FloatArray:
+    """Temperatures over the scale of energies; RangeError outside the allowed range."""
+    given, unit, (low, high) = np.asarray(value, float), factor.energy, allowed_k
     scaled = given / unit
-    bad = ~((scaled >= COLDEST_K) & (scaled <= HOTTEST_K))
+    bad = ~((scaled >= low) & (scaled <= high))
     if bad.any():
         raise RangeError(
-            f"{name} = {given[bad].flat[0]:g}: allowed are {COLDEST_K * unit:g} to "
-            f"{HOTTEST_K * unit:g} K"
+            f"{name} = {given[bad].flat[0]:g}: allowed are {low * unit:g} to {high * unit:g} K"
         )
     return scaled
 

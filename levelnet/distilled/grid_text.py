@@ -14,6 +14,7 @@ import numpy as np
 from ..arrays import FloatArray
 from .about import about_lines, level_names, pair_names
 from .effective import NEVER
+from .series import local_series
 from .table import COLLISIONS_K, EffectiveTable
 
 # So that the spline errs by little more than the table at its default tolerance.
@@ -47,7 +48,7 @@ def table_grid(table: EffectiveTable, x: FloatArray, y: FloatArray) -> Grid:
     spline needs it whole; the figures there are those of an atom without collisions.
     """
     # Past the check of `effective_rates`, which refuses the hot corner.
-    here = table._series(*np.meshgrid(x - math.log(table.scales.energy), y, indexing="ij"))
+    here = local_series(table, *np.meshgrid(x - math.log(table.scales.energy), y, indexing="ij"))
     unit = table.scales
     recombination = here.equilibrium + y[:, None] * here.departure + math.log(unit.recombination)
     temperature = np.exp(x)[:, None]

@@ -19,7 +19,8 @@ from ..network.helium import helium_rate_constants, reduce_helium
 from ..network.rates import RateConstants, rate_constants, stack
 from ..network.reduction import exchange_pairs, reduce_at
 from .effective import log_capture
-from .stage import StageTable, log_rates
+from .series import local_series
+from .stage import StageTable
 from .table import EffectiveTable
 
 _SEED, _POINTS, _RATIOS = 20_260_102, 12, 8
@@ -99,10 +100,10 @@ def _stage_errors(
     n_pairs, errors = len(stage.lower), []
     for x in random.uniform(stage.log_low, stage.log_high, _POINTS).tolist():
         node, y = reduce(math.exp(x)), random.uniform(stage.ratio_low, stage.ratio_high, _RATIOS)
-        radiation_k = np.full(_RATIOS, math.exp(x))
-        recombination, exchange = log_rates(stage, radiation_k, y)
-        captured = recombination - log_capture(constants, node, radiation_k * np.exp(y))
-        errors.append(np.hstack([captured, exchange - node[:n_pairs]]))
+        here = local_series(stage, np.full(_RATIOS, x), y)
+        recombination = here.equilibrium + y[:, None] * here.departure
+        captured = recombination - log_capture(constants, node, np.exp(x + y))
+        errors.append(np.hstack([captured, here.exchange - node[:n_pairs]]))
     all_errors = np.concatenate(errors)
     species, terms = called
     pairs = zip(stage.upper.tolist(), stage.lower.tolist(), strict=True)

@@ -10,10 +10,13 @@ from .. import constants as const
 from ..atomic.physics import UNCHANGED, Physics, scales
 from ..background.cosmology import Cosmology
 from ..errors import InputError
+from ..escape.helium_lines import kept_terms
 from ..escape.lines import Lines
 from ..escape.treatment import SobolevFeedback
 from ..history.atom import open_lyman_lines
+from ..history.helium_atom import higher_lines
 from ..history.setup import Setup
+from ..network.helium import KeptTerms
 from ..network.reduced import KeptLevels
 
 if TYPE_CHECKING:
@@ -31,7 +34,7 @@ def needed_levels(setup: Setup) -> KeptChoice:
     return tuple(sorted({(2, 0), *lyman, *setup.lines.field_levels}))
 
 
-def choose_kept(setup: Setup, kept: Iterable[tuple[int, int]] | None) -> KeptChoice:
+def choose_kept(setup: Setup, kept: Iterable[tuple[int, ...]] | None) -> KeptChoice:
     """Check a choice of kept levels.
 
     Parameters
@@ -52,31 +55,84 @@ def choose_kept(setup: Setup, kept: Iterable[tuple[int, int]] | None) -> KeptCho
         If a level does not exist in the setup's atom, or one that is needed is missing: what is
         eliminated cannot talk to the ground state.
     """
-    needed = needed_levels(setup)
+    top, needed = setup.hydrogen.highest_resolved, needed_levels(setup)
+    whole = top < setup.hydrogen.n_max
+    chosen = _pairs(kept, needed, top, ", resolved in l" if whole else "")
+    _check_needed(
+        chosen,
+        needed,
+        "2s, 2p, every np with an open Lyman line and every level with two-photon or Raman "
+        "transitions",
+    )
+    return chosen
+
+
+def choose_ion_kept(setup: Setup, kept: Iterable[tuple[int, ...]] | None) -> KeptChoice:
+    """Check a choice of kept levels of He II, as :func:`choose_kept`; 2s and 2p are needed."""
+    needed = (2, 0), (2, 1)
+    chosen = _pairs(kept, needed, setup.helium.n_max, "")
+    _check_needed(chosen, needed, "2s and 2p")
+    return chosen
+
+
+def choose_terms(setup: Setup, kept: Iterable[tuple[int, ...]] | None) -> KeptTerms:
+    """Check a choice of kept terms of He I.
+
+    Parameters
+    ----------
+    setup : Setup
+        The run; ``lines.helium_higher_lines`` says which n 1P must be kept.
+    kept : iterable of (n, l, spin), or None
+        Terms to keep; None: those needed.
+
+    Returns
+    -------
+    tuple of (n, l, spin)
+        Sorted.
+    """
+    top = setup.helium.n_max
+    needed = kept_terms(top, higher_lines(setup))
     if kept is None:
         return tuple(sorted(needed))
-    top = setup.hydrogen.highest_resolved
+    try:
+        chosen = {(operator.index(n), operator.index(l), operator.index(s)) for n, l, s in kept}
+    except (TypeError, ValueError):
+        raise InputError("kept: give triples of whole numbers (n, l, spin) for He I") from None
+    for n, l, spin in sorted(chosen):
+        if not (2 <= n <= top and 0 <= l < n and spin in {0, 1}):
+            raise InputError(
+                f"kept = {(n, l, spin)}: allowed are (n, l, spin) with 2 <= n <= {top}, "
+                "0 <= l < n, spin 0 or 1"
+            )
+    _check_needed(chosen, needed, "2 1S, 2 1P, 2 3S, 2 3P and every n 1P with an open line")
+    return tuple(sorted(chosen))
+
+
+def _pairs(
+    kept: Iterable[tuple[int, ...]] | None, needed: KeptChoice, top: int, remark: str
+) -> KeptChoice:
+    """Kept levels of a hydrogenic atom, sorted; None: those needed."""
+    if kept is None:
+        return tuple(sorted(needed))
     try:
         chosen = {(operator.index(n), operator.index(l)) for n, l in kept}
     except (TypeError, ValueError):
         raise InputError("kept: give pairs of whole numbers (n, l)") from None
-    bad = sorted(level for level in chosen if not 2 <= level[0] <= top or not _l_fits(level))
-    if bad:
-        raise InputError(
-            f"kept = {bad[0]}: allowed are (n, l) with 2 <= n <= {top}, 0 <= l < n"
-            + (", resolved in l" if top < setup.hydrogen.n_max else "")
-        )
-    missing = sorted(set(needed) - chosen)
-    if missing:
-        raise InputError(
-            f"kept: (n, l) = {missing[0]} is missing; 2s, 2p, every np with an open Lyman line and "
-            "every level with two-photon or Raman transitions must be kept"
-        )
+    for n, l in sorted(chosen):
+        if not (2 <= n <= top and 0 <= l < n):
+            raise InputError(
+                f"kept = {(n, l)}: allowed are (n, l) with 2 <= n <= {top}, 0 <= l < n{remark}"
+            )
     return tuple(sorted(chosen))
 
 
-def _l_fits(level: tuple[int, int]) -> bool:
-    return 0 <= level[1] < level[0]
+def _check_needed(
+    chosen: Iterable[tuple[int, ...]], needed: Iterable[tuple[int, ...]], all_needed: str
+) -> None:
+    missing = sorted(set(needed) - set(chosen))
+    if missing:
+        numbers = "(n, l)" if len(missing[0]) == 2 else "(n, l, spin)"
+        raise InputError(f"kept: {numbers} = {missing[0]} is missing; {all_needed} must be kept")
 
 
 def check_kept(setup: Setup, kept: KeptLevels) -> None:

@@ -43,7 +43,7 @@ _ATTEMPTS = 2
 
 @dataclass(frozen=True, slots=True)
 class Atom:
-    """All that the reduction of hydrogen depends on, besides T_r.
+    """All that the reduction of a hydrogenic atom depends on, besides T_r.
 
     Attributes
     ----------
@@ -57,6 +57,8 @@ class Atom:
         Highest n with levels resolved in l.
     overrides : tuple of Override
         Factors on lines and cross sections.
+    charge : int
+        Nuclear charge: 1 hydrogen, 2 the helium ion.
     """
 
     n_max: int
@@ -64,6 +66,7 @@ class Atom:
     kept: KeptChoice
     resolve_l_to: int
     overrides: tuple[Override, ...] = ()
+    charge: int = 1
 
     @staticmethod
     def of(hydrogen: Hydrogen, kept: KeptChoice, overrides: tuple[Override, ...] = ()) -> Atom:
@@ -74,14 +77,14 @@ class Atom:
         """Build the ladder, or its part up to `n_max`."""
         top = n_max or self.n_max
         resolved = min(self.resolve_l_to, top)
-        return hydrogen_ladder(top, self.energies, self.kept, resolved, self.overrides)
+        return hydrogen_ladder(top, self.energies, self.kept, resolved, self.overrides, self.charge)
 
     @property
     def name(self) -> str:
         """Content name of the atom with the code that computes it."""
         code = code_digest(("constants", "kernels", "numerics", "atomic", "network"))
         factors = tuple(one.key for one in self.overrides)
-        what = self.n_max, self.energies, self.kept, self.resolve_l_to, factors
+        what = self.n_max, self.energies, self.kept, self.resolve_l_to, factors, self.charge
         return content_key("distilled node", code, *what)
 
 

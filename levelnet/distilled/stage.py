@@ -6,20 +6,25 @@ helium recombines.
 
 from __future__ import annotations
 
-import math
 from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
+from numpy.typing import ArrayLike
 
 from .. import constants as const
 from ..arrays import FloatArray, IntArray, frozen_array
-from ..atomic.detailed_balance import saha_coefficients
+from ..atomic.detailed_balance import SahaCoefficients, saha_coefficients
+from ..atomic.physics import Scales
 from ..kernels.effective import Atom
 from ..network.rates import RateConstants
 from ..network.reduced import KeptLevels
+from ..network.scaled import scaled_levels
 from ..numerics.chebyshev import ChebyshevSeries
+from .effective import EffectiveRates
 from .patches import Ranges, fit_patches
+from .series import position_in, rates_at
+from .species import AtomName
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -165,7 +170,7 @@ def stage_atom(
     decay_rate_per_s : float, s^-1
         Of the first kept level, by two photons.
     """
-    saha = saha_coefficients(stage.statistical_weight / ion_weight, stage.ionization_energy_ev, 2)
+    saha = stage_saha(stage, ion_weight)
     level = [
         np.log(stage.statistical_weight / ground_weight),
         stage.energy_ev / const.BOLTZMANN_EV_K,
@@ -192,36 +197,43 @@ def stage_atom(
     )
 
 
-def log_rates(
-    stage: StageTable, radiation_k: FloatArray, ratio: FloatArray
-) -> tuple[FloatArray, FloatArray]:
-    """Ln of recombination (cm^3/s) and of downward exchange (s^-1, barrier kept out).
+def stage_rates(
+    stage: StageTable,
+    radiation_temperature_k: ArrayLike,
+    matter_temperature_k: ArrayLike,
+    atom: AtomName,
+    factor: Scales,
+) -> EffectiveRates:
+    """Rates of a stage at many temperatures; RangeError outside its range.
 
     Parameters
     ----------
     stage : StageTable
         The table.
-    radiation_k, ratio : ndarray, shape (n_points,), K and dimensionless
-        T_r and ln(T_m/T_r), inside the table.
-
-    Returns
-    -------
-    ndarray, shapes (n_points, n_kept) and (n_points, n_pairs)
+    radiation_temperature_k, matter_temperature_k : array_like, K
+        Broadcast.
+    atom : "He I" or "He II"
+        Whose table it is.
+    factor : Scales
+        What changed constants do to it.
     """
-    recombination, exchange = [], []
-    n_x, n_y = stage.departure.shape[:2]
-    order = np.arange(stage.equilibrium.shape[-1])
-    for temperature_k, y in zip(radiation_k.tolist(), ratio.tolist(), strict=True):
-        i, t = _cell(math.log(temperature_k), stage.log_low, stage.log_high, n_x)
-        j, w = _cell(y, stage.ratio_low, stage.ratio_high, n_y)
-        power_t, power_w = t**order, w**order
-        departure = stage.departure[i, j] @ power_w @ power_t
-        recombination.append(stage.equilibrium[i] @ power_t + y * departure)
-        exchange.append(stage.exchange[i] @ power_t)
-    return np.array(recombination), np.array(exchange)
+    place = position_in(
+        stage, radiation_temperature_k, matter_temperature_k, factor.energy, f"the table of {atom}"
+    )
+    neutral = atom == "He I"
+    kept = KeptLevels(
+        stage.n,
+        stage.l,
+        stage.statistical_weight,
+        stage.energy_ev,
+        stage.ionization_energy_ev,
+        1.0 if neutral else 2.0,
+        stage.spin if neutral else None,
+    )
+    saha = stage_saha(stage, 2.0 if neutral else 1.0)
+    return rates_at(stage, scaled_levels(kept, factor), saha, factor, place)
 
 
-def _cell(x: float, low: float, high: float, count: int) -> tuple[int, float]:
-    place = (x - low) * count / (high - low)
-    cell = min(max(int(place), 0), count - 1)
-    return cell, 2.0 * (place - cell) - 1.0
+def stage_saha(stage: StageTable, ion_weight: float) -> SahaCoefficients:
+    """Saha coefficients of the kept levels; `ion_weight` is that of the ion above them."""
+    return saha_coefficients(stage.statistical_weight / ion_weight, stage.ionization_energy_ev, 2)

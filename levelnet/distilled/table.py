@@ -1,10 +1,8 @@
 """The table of effective rates: local power series in ln T_r and ln(T_m/T_r).
 
-With x = ln T_r and y = ln(T_m/T_r), the table holds ln A_i(T_r, T_r) over x, the departure h_i of
-ln A_i = ln A_i(T_r, T_r) + y h_i(x, y), so that T_m = T_r is exact, and the ln of the downward
-exchange rates with the Boltzmann factor of their barrier kept out. Photoionization is never stored:
-it follows from ln A_i(T_r, T_r) by detailed balance. Everything in the arrays belongs to the atom
-with measured constants; changed ones scale temperatures and rates on the way in and out.
+:mod:`levelnet.distilled.series` says what the series are and evaluates them. Everything in the
+arrays belongs to the atom with measured constants; changed ones scale temperatures and rates on the
+way in and out.
 """
 
 from __future__ import annotations
@@ -12,54 +10,32 @@ from __future__ import annotations
 import dataclasses
 import math
 from dataclasses import dataclass
-from typing import TYPE_CHECKING, Any, NamedTuple
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 from numpy.typing import ArrayLike
 
-from ..arrays import BoolArray, FloatArray, IntArray, frozen_array
+from ..arrays import FloatArray, IntArray, frozen_array
 from ..atomic.detailed_balance import SahaCoefficients, saha_coefficients
 from ..atomic.physics import Physics, Scales, scales
-from ..errors import RangeError
+from ..errors import InputError
 from ..history.setup import Setup
 from ..markup import html_table
 from ..network.reduced import KeptLevels, ReducedRates
 from ..network.scaled import scaled_levels, scaled_rates
-from .effective import NEVER, EffectiveRates
+from .effective import EffectiveRates
+from .series import SLACK, exchange_of, local_series, position_in, rates_at, refuse_outside
+from .species import AtomName, atom_name, scales_of
+from .stage import StageTable, stage_rates
 
 if TYPE_CHECKING:
     import xarray
 
     from .certificate import Certificate
     from .helium_escape import LineTable
-    from .stage import StageTable
 
 COLLISIONS_K = 8000.0
 """Matter above this and above the radiation would be ionized by collisions, which are left out."""
-# Temperatures may miss the ends of the table by this much in the logarithm: rounding.
-_SLACK = 1e-12
-
-
-class LocalSeries(NamedTuple):
-    """The table's series at some temperatures; leading axes are those of the temperatures.
-
-    Attributes
-    ----------
-    equilibrium, equilibrium_slope : ndarray, shape (..., n_kept)
-        ln A_i(T_r, T_r) and its derivative by x.
-    departure, departure_slope_x, departure_slope_y : ndarray, shape (..., n_kept)
-        h_i and its derivatives.
-    exchange, exchange_slope : ndarray, shape (..., n_pairs)
-        ln of the downward exchange rate times exp(barrier/kT_r), and its derivative by x.
-    """
-
-    equilibrium: FloatArray
-    equilibrium_slope: FloatArray
-    departure: FloatArray
-    departure_slope_x: FloatArray
-    departure_slope_y: FloatArray
-    exchange: FloatArray
-    exchange_slope: FloatArray
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -210,10 +186,10 @@ class EffectiveTable:
     def rates(self, radiation_temperature_k: float, matter_temperature_k: float) -> ReducedRates:
         """Effective rates with their slopes, as histories want them; RangeError outside."""
         x, y = self._position(radiation_temperature_k, matter_temperature_k)
-        here, temperature_k = self._series(x, y), math.exp(x)
+        here, temperature_k = local_series(self, x, y), math.exp(x)
         log_a = here.equilibrium + y * here.departure
         factor, saha = self.scales, self.saha
-        down, up = self._log_exchange(here.exchange, temperature_k)
+        down, up = exchange_of(self, here.exchange, temperature_k)
         exchange, slope = np.zeros((2, len(self.kept), len(self.kept)))
         i, j = self.lower, self.upper
         exchange[j, i], exchange[i, j] = np.exp(down), np.exp(up)
@@ -232,115 +208,63 @@ class EffectiveTable:
         return scaled_rates(rates, factor)
 
     def effective_rates(
-        self, radiation_temperature_k: ArrayLike, matter_temperature_k: ArrayLike
+        self,
+        radiation_temperature_k: ArrayLike,
+        matter_temperature_k: ArrayLike,
+        atom: str = "H I",
     ) -> EffectiveRates:
-        """Rates and their logarithms at many temperatures, K, which broadcast; RangeError outside.
+        """Rates and their logarithms at many temperatures.
+
+        Parameters
+        ----------
+        radiation_temperature_k, matter_temperature_k : array_like, K
+            Broadcast; within the range of the table, of helium within that of its own table
+            (T_r = 1400 to 27500 K, T_m/T_r = 0.5 to 1.5).
+        atom : "H I", "He I" or "He II"
+            Whose rates; of helium where the table holds them.
 
         Returns
         -------
         EffectiveRates
-            As :func:`levelnet.effective_rates` gives them, to `tolerance` in each logarithm.
-        """
-        x, y = self._position(radiation_temperature_k, matter_temperature_k)
-        here, temperature_k = self._series(x, y), np.exp(x)[..., None]
-        factor, n = self.scales, len(self.kept)
-        down, up = self._log_exchange(here.exchange, temperature_k)
-        exchange = np.full((*np.shape(x), n, n), -np.inf)
-        exchange[..., self.upper, self.lower] = down
-        exchange[..., self.lower, self.upper] = up
-        return EffectiveRates(
-            self.kept,
-            here.equilibrium + y[..., None] * here.departure + math.log(factor.recombination),
-            here.equilibrium - self.saha.log_factor(temperature_k) + math.log(factor.line_rate),
-            exchange + math.log(factor.line_rate),
-        )
+            As :func:`levelnet.effective_rates` gives them, to `tolerance` in each logarithm. Those
+            of helium with changed constants are scaled like those of hydrogen, exactly.
 
-    def _log_exchange(
-        self, stored: FloatArray, temperature_k: float | FloatArray
-    ) -> tuple[FloatArray, FloatArray]:
-        """Ln of the exchange rates down and up, measured constants; -inf where there are none."""
-        # A series that stands for NEVER is a constant; nothing real comes near it.
-        down = np.where(stored > NEVER + 1.0, stored - self.barrier_k / temperature_k, -np.inf)
-        return down, down + self.log_weight_ratio - self.rise_k / temperature_k
+        Raises
+        ------
+        InputError
+            For an atom that the table does not hold, and (RangeError) outside the range.
+        """
+        name = atom_name(atom)
+        if name != "H I":
+            stage, factor = self._stage(name), scales_of(self.setup, name)
+            return stage_rates(stage, radiation_temperature_k, matter_temperature_k, name, factor)
+        place = self._position(radiation_temperature_k, matter_temperature_k)
+        return rates_at(self, self.kept, self.saha, self.scales, place)
+
+    def _stage(self, atom: AtomName) -> StageTable:
+        """Give the table of He I or He II; InputError where there is none."""
+        stage = self.helium if atom == "He I" else self.helium_ion
+        if stage is None:
+            asked = 'helium.helium_ion = "network"'
+            if self.helium is None:
+                asked = "helium.n_max = 2 or above, in a universe with helium"
+            raise InputError(
+                f'atom = "{atom}": this table holds no rates of it; distil a setup with {asked}'
+            )
+        return stage
 
     def _position(
         self, radiation_temperature_k: ArrayLike, matter_temperature_k: ArrayLike
     ) -> tuple[FloatArray, FloatArray]:
         """Place x, y in the table; RangeError outside it."""
-        radiation, matter = np.broadcast_arrays(
-            np.asarray(radiation_temperature_k, float), np.asarray(matter_temperature_k, float)
-        )
-        with np.errstate(invalid="ignore", divide="ignore"):
-            x = np.log(radiation / self.scales.energy)
-            y = np.log(matter / radiation)
-        _refuse_outside(
-            (x >= self.log_low - _SLACK) & (x <= self.log_high + _SLACK),
-            radiation,
-            "T_r = {:g} K",
-            "{:g} to {:g} K".format(*self.radiation_range_k),
-        )
-        _refuse_outside(
-            (y >= self.ratio_low - _SLACK) & (y <= self.ratio_high + _SLACK),
-            matter / radiation,
-            "T_m/T_r = {:g}",
-            f"{math.exp(self.ratio_low):g} to {math.exp(self.ratio_high):g}",
-        )
-        hottest = COLLISIONS_K * self.scales.energy
-        _refuse_outside(
-            matter <= np.maximum(hottest, radiation) * (1.0 + _SLACK),
+        unit = self.scales.energy
+        x, y = position_in(self, radiation_temperature_k, matter_temperature_k, unit)
+        radiation, matter = np.exp(x) * unit, np.exp(x + y) * unit
+        hottest = COLLISIONS_K * unit
+        refuse_outside(
+            matter <= np.maximum(hottest, radiation) * (1.0 + SLACK),
             matter,
             "T_m = {:g} K",
             f"up to {hottest:g} K or T_r, whichever is higher; collisional ionization is left out",
         )
         return x, y
-
-    def _series(self, x: FloatArray, y: FloatArray) -> LocalSeries:
-        n_x, n_y = self.departure.shape[:2]
-        i, t, stretch_x = _cell(x, self.log_low, self.log_high, n_x)
-        j, u, stretch_y = _cell(y, self.ratio_low, self.ratio_high, n_y)
-        power_t, slope_t = _powers(t, self.equilibrium.shape[-1])
-        power_u, slope_u = _powers(u, self.equilibrium.shape[-1])
-        equilibrium, exchange, departure = (
-            self.equilibrium[i],
-            self.exchange[i],
-            self.departure[i, j],
-        )
-        along_y = np.einsum("...kpq,...q->...kp", departure, power_u)
-        by_y = np.einsum("...kpq,...q->...kp", departure, slope_u)
-        return LocalSeries(
-            _sum(equilibrium, power_t),
-            _sum(equilibrium, slope_t) * stretch_x,
-            _sum(along_y, power_t),
-            _sum(along_y, slope_t) * stretch_x,
-            _sum(by_y, power_t) * stretch_y,
-            _sum(exchange, power_t),
-            _sum(exchange, slope_t) * stretch_x,
-        )
-
-
-def _sum(coefficients: FloatArray, power: FloatArray) -> FloatArray:
-    return np.asarray(np.einsum("...kp,...p->...k", coefficients, power))
-
-
-def _cell(x: FloatArray, low: float, high: float, count: int) -> tuple[IntArray, FloatArray, float]:
-    """Cell of each x, position t in it from -1 to 1, and dt/dx."""
-    place = (np.asarray(x) - low) * (count / (high - low))
-    cell = np.clip(np.floor(place), 0, count - 1).astype(np.int64)
-    return cell, np.clip(2.0 * (place - cell) - 1.0, -1.0, 1.0), 2.0 * count / (high - low)
-
-
-def _powers(t: FloatArray, count: int) -> tuple[FloatArray, FloatArray]:
-    """Powers of t and their derivatives, shape (..., count)."""
-    order = np.arange(count)
-    power = t[..., None] ** order
-    slope = np.zeros_like(power)
-    slope[..., 1:] = order[1:] * power[..., :-1]
-    return power, slope
-
-
-def _refuse_outside(good: BoolArray, value: FloatArray, text: str, allowed: str) -> None:
-    bad = ~np.asarray(good, bool)
-    if bad.any():
-        raise RangeError(
-            f"{text.format(value[bad].flat[0])}: outside the table; allowed: {allowed}"
-        )

@@ -95,7 +95,7 @@ def helium_lines_of(setup: Setup, ladders: HeliumLadders) -> HeliumGroundLines:
     rates = setup.rates
     fed = setup.lines.helium == "sobolev_feedback" or (choice is not None and choice.feedback)
     assert rate is not None
-    lines = helium_ground_lines(ladders, fed, _higher(setup), rate, setup.physics)
+    lines = helium_ground_lines(ladders, fed, higher_lines(setup), rate, setup.physics)
     factor = rates.ground_line_factors(lines.names, "bound_bound")
     if factor is not None:
         lines = with_strengths(lines, factor)
@@ -103,7 +103,8 @@ def helium_lines_of(setup: Setup, ladders: HeliumLadders) -> HeliumGroundLines:
     return replace(lines, hydrogen_cross_section_cm2=sigma)
 
 
-def _higher(setup: Setup) -> HigherLines:
+def higher_lines(setup: Setup) -> HigherLines:
+    """What becomes of the lines of He I from n 1P, n from 3, to its ground state."""
     return setup.lines.helium_higher_lines or "closed"
 
 
@@ -168,7 +169,7 @@ def _first(
 ) -> tuple[HeliumLadders, NeutralHelium, int, float]:
     """He I: its terms, its network, reductions behind the table and the error of that."""
     changed = setup.rates.network_of("He I")
-    terms = kept_terms(setup.helium.n_max, _higher(setup))
+    terms = kept_terms(setup.helium.n_max, higher_lines(setup))
     ladders = helium_ladders(setup.helium.n_max, terms, overrides=changed)
     reduced = _table_of_first(ladders, tables, tuple(part for one in changed for part in one.key))
     decay = [(int(n), int(l), int(s)) for n, l, s in _terms(ladders.kept)].index((2, 0, 0))

@@ -42,6 +42,7 @@ GeneralSolver = BlockLU | BorderedLU
 
 # sqrt(w) spans e^(1.51 eV / 2kT), which reaches e^326 here; doubles end at e^709 and products of
 # two such factors occur. Just below a point of the lattice to which histories reduce, 2^4.75 K.
+# Per charge^2: energies of an ion go as that.
 COLD_K = 26.9
 
 
@@ -208,8 +209,8 @@ def factor_interior(
     radiation_temperature_k : float, K
         T_r, above 0.
     workspace : Workspace, optional
-        Buffers to reuse; the result refers to them until they are used again. Below COLD_K, where
-        they are of no use, their memory is given back.
+        Buffers to reuse; the result refers to them until they are used again. Below COLD_K times
+        charge^2, where they are of no use, their memory is given back.
 
     Returns
     -------
@@ -234,7 +235,7 @@ def factor_interior(
     weight = ladder.levels.statistical_weight[inside.position]
     log_root = 0.5 * (np.log(weight) - (energy - energy.min(initial=np.inf)) / kt)
     solver: SymmetricSolver | GeneralSolver
-    if radiation_temperature_k < COLD_K:
+    if radiation_temperature_k < COLD_K * ladder.charge**2:
         if workspace is not None:  # of no use without symmetry, which itself takes more memory
             workspace.release()
         cold = _factor_cold(ladder, radiation_temperature_k, sink)
