@@ -142,6 +142,7 @@ def helium_recombination_cm3_per_s(
     atom: HeliumBoundFree,
     matter_temperature_k: float,
     radiation_temperature_k: float | None = None,
+    captured: FloatArray | None = None,
 ) -> FloatArray:
     """Radiative recombination coefficients He+ + e -> every level of He I.
 
@@ -153,6 +154,8 @@ def helium_recombination_cm3_per_s(
         Temperature of the electrons.
     radiation_temperature_k : float, K, optional
         Temperature of the blackbody that stimulates recombination; None: no stimulated part.
+    captured : ndarray, optional
+        What :func:`captured_spectrum` gives for this radiation temperature, where it is at hand.
 
     Returns
     -------
@@ -170,7 +173,8 @@ def helium_recombination_cm3_per_s(
             f"allowed are {COLDEST_K:g} to {HOTTEST_K:g} K"
         )
     levels, grid = atom.levels, atom.grid
-    captured = captured_spectrum(atom, radiation_temperature_k)
+    if captured is None:
+        captured = captured_spectrum(atom, radiation_temperature_k)
     thermal_ev = const.BOLTZMANN_EV_K * matter_temperature_k
     with np.errstate(under="ignore"):
         total = captured @ np.exp(-grid.energy * levels.chi_ev / thermal_ev)
@@ -209,7 +213,7 @@ def captured_spectrum(
 
 
 def helium_photoionization_per_s(
-    atom: HeliumBoundFree, radiation_temperature_k: float
+    atom: HeliumBoundFree, radiation_temperature_k: float, captured: FloatArray | None = None
 ) -> FloatArray:
     """Photoionization rates of every level of He I in a blackbody, by detailed balance.
 
@@ -219,6 +223,8 @@ def helium_photoionization_per_s(
         Cross sections.
     radiation_temperature_k : float, K, 0.02 to 1e5
         Temperature of the blackbody.
+    captured : ndarray, optional
+        What :func:`captured_spectrum` gives for this temperature, where it is at hand.
 
     Returns
     -------
@@ -230,7 +236,8 @@ def helium_photoionization_per_s(
     Milne 1924, Phil. Mag. 47, 209.
     """
     levels = atom.levels
-    alpha = helium_recombination_cm3_per_s(atom, radiation_temperature_k, radiation_temperature_k)
+    kelvin = radiation_temperature_k
+    alpha = helium_recombination_cm3_per_s(atom, kelvin, kelvin, captured)
     return photoionization_from_recombination(
         alpha,
         levels.statistical_weight / ION_WEIGHT,

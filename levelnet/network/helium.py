@@ -195,12 +195,41 @@ class SpinInterior(NamedTuple):
 def factor_spin(ladders: HeliumLadders, spin: int, kt_ev: float, sink: FloatArray) -> SpinInterior:
     """Factor the eliminated levels of one spin, which leave it at the rates `sink` in s^-1."""
     inside = ladders.interior[spin]
-    where, levels, shape = inside.position, ladders.levels, inside.shape
+    shape, levels = inside.shape, ladders.levels
     sink = np.where(inside.idle, 1.0, sink)
-    energy = levels.energy_ev[where]
-    log_weight = np.log(levels.statistical_weight[where]) - (energy - energy.min()) / kt_ev
+    energy = levels.energy_ev[inside.position]
+    statistical = levels.statistical_weight[inside.position]
+    log_weight = np.log(statistical) - (energy - energy.min()) / kt_ev
     root = np.exp(0.5 * log_weight)
-    means, outflow = [], sink.copy()
+    strength, gap_ev = _couplings(ladders, spin)
+    coupling = strength / (2.0 * np.sinh(0.5 / kt_ev * gap_ev))
+    between = [
+        (shape.slice(l), shape.slice(l + 1), shape.coupling(coupling, l))
+        for l in range(len(shape.size) - 1)
+    ]
+    outflow = sink.copy()
+    for rows, columns, mean in between:
+        outflow[rows] += mean @ root[columns] / root[rows]
+        outflow[columns] += root[rows] @ mean / root[columns]
+    scale = np.sqrt(outflow)
+    sent = np.zeros(shape.n_unknowns)
+    weight = root * scale
+    for rows, columns, mean in between:
+        mean[...] /= np.outer(scale[rows], scale[columns])
+        sent[columns] = weight[rows] @ mean
+    solver = factor_symmetric(shape, coupling, weight, sent, sink * root / scale)
+    return SpinInterior(solver, root * root, scale)
+
+
+@functools.lru_cache(maxsize=4)
+def _couplings(ladders: HeliumLadders, spin: int) -> tuple[FloatArray, FloatArray]:
+    """Strengths (s^-1) and energies (eV, 1 where there is no line) of the lines of one spin.
+
+    Between eliminated levels: block after block, each from l (rows) to l + 1.
+    """
+    inside, levels = ladders.interior[spin], ladders.levels
+    shape, where = inside.shape, inside.position
+    strengths, gaps = np.zeros((2, shape.n_couplings))
     for l in range(len(shape.size) - 1):
         rows, columns = shape.slice(l), shape.slice(l + 1)
         own, other = where[rows], where[columns]
@@ -208,23 +237,10 @@ def factor_spin(ladders: HeliumLadders, spin: int, kt_ev: float, sink: FloatArra
         strength = block[np.ix_(levels.n[own] - l - 1, levels.n[other] - l - 2)].copy()
         strength[inside.idle[rows]] = 0.0
         strength[:, inside.idle[columns]] = 0.0
-        x = np.abs(levels.energy_ev[own][:, None] - levels.energy_ev[other]) / kt_ev
-        mean = np.where(
-            strength > 0.0, strength / (2.0 * np.sinh(0.5 * np.maximum(x, 1e-300))), 0.0
-        )
-        means.append(mean)
-        outflow[rows] += mean @ root[columns] / root[rows]
-        outflow[columns] += root[rows] @ mean / root[columns]
-    scale = np.sqrt(outflow)
-    sent = np.zeros(shape.n_unknowns)
-    weight = root * scale
-    for l in range(len(means)):
-        rows, columns = shape.slice(l), shape.slice(l + 1)
-        means[l] /= np.outer(scale[rows], scale[columns])
-        sent[columns] = weight[rows] @ means[l]
-    coupling = np.concatenate([mean.ravel() for mean in means])
-    solver = factor_symmetric(shape, coupling, weight, sent, sink * root / scale)
-    return SpinInterior(solver, root * root, scale)
+        gap = np.abs(levels.energy_ev[own][:, None] - levels.energy_ev[other])
+        shape.coupling(strengths, l)[...] = strength
+        shape.coupling(gaps, l)[...] = np.where(strength > 0.0, gap, 1.0)
+    return strengths, gaps
 
 
 class Reduction(NamedTuple):
@@ -232,6 +248,8 @@ class Reduction(NamedTuple):
 
     Attributes
     ----------
+    captured : ndarray, shape (n_levels, n_energies), s^-1
+        What :func:`levelnet.atomic.helium_bound_free.captured_spectrum` gives.
     photoionization_per_s : ndarray, shape (n_levels,), s^-1
         Of every level.
     kept_lines : tuple of KeptLines
@@ -242,6 +260,7 @@ class Reduction(NamedTuple):
         Singlets and triplets; None: no level is eliminated.
     """
 
+    captured: FloatArray
     photoionization_per_s: FloatArray
     kept_lines: tuple[KeptLines, ...]
     to_kept: FloatArray
@@ -251,7 +270,8 @@ class Reduction(NamedTuple):
 def factor_helium(ladders: HeliumLadders, radiation_temperature_k: float) -> Reduction:
     """Rates of He I at one T_r, and its interior ready to be solved."""
     kt = const.BOLTZMANN_EV_K * radiation_temperature_k
-    photo = helium_photoionization_per_s(ladders.bound_free, radiation_temperature_k)
+    captured = captured_spectrum(ladders.bound_free, radiation_temperature_k)
+    photo = helium_photoionization_per_s(ladders.bound_free, radiation_temperature_k, captured)
     rows = tuple(_kept_lines(ladders, k, kt) for k in range(len(ladders.kept)))
     to_kept = np.array([row.back for row in rows])
     to_kept[:, ladders.kept_position] = 0.0
@@ -260,7 +280,7 @@ def factor_helium(ladders: HeliumLadders, radiation_temperature_k: float) -> Red
         inside = ladders.interior[spin]
         sink = photo[inside.position] + to_kept[:, inside.position].sum(axis=0)
         sides.append(factor_spin(ladders, spin, kt, sink) if inside.shape.n_unknowns else None)
-    return Reduction(photo, rows, to_kept, (sides[0], sides[1]))
+    return Reduction(captured, photo, rows, to_kept, (sides[0], sides[1]))
 
 
 def reduce_helium(ladders: HeliumLadders, radiation_temperature_k: float) -> FloatArray:
@@ -273,7 +293,7 @@ def reduce_helium(ladders: HeliumLadders, radiation_temperature_k: float) -> Flo
         capture into each, as :func:`levelnet.network.rates.assemble_rates` takes them.
     """
     here = factor_helium(ladders, radiation_temperature_k)
-    found = reduce_factored(ladders, here, radiation_temperature_k)
+    found = reduce_factored(ladders, here)
     lower, upper = np.triu_indices(len(ladders.kept), 1)
     with np.errstate(divide="ignore"):
         exchange = np.maximum(np.log(found.exchange[upper, lower]), NEVER)
@@ -298,9 +318,7 @@ class ReducedHelium(NamedTuple):
     spectrum: FloatArray
 
 
-def reduce_factored(
-    ladders: HeliumLadders, here: Reduction, radiation_temperature_k: float
-) -> ReducedHelium:
+def reduce_factored(ladders: HeliumLadders, here: Reduction) -> ReducedHelium:
     """Reduce He I at one T_r, given what :func:`factor_helium` made of it there."""
     rows = here.kept_lines
     fates = np.zeros((len(rows), len(ladders.levels)))
@@ -310,7 +328,7 @@ def reduce_factored(
     detour = np.array([row.out for row in rows]) @ fates.T
     direct = np.array([row.out[ladders.kept_position] for row in rows])
     fates[:, ladders.kept_position] = np.eye(len(rows))
-    spectrum = fates @ captured_spectrum(ladders.bound_free, radiation_temperature_k)
+    spectrum = fates @ here.captured
     return ReducedHelium(fates, detour + direct, spectrum)
 
 

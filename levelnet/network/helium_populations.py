@@ -4,10 +4,9 @@ from __future__ import annotations
 
 import numpy as np
 
-from .. import constants as const
 from ..arrays import FloatArray, IntArray
-from ..atomic.detailed_balance import log_saha_factor, thermal_volume_cm3
-from ..atomic.helium_bound_free import ION_WEIGHT, captured_spectrum
+from ..atomic.detailed_balance import log_saha_factor
+from ..atomic.helium_bound_free import ION_WEIGHT, helium_recombination_cm3_per_s
 from ..background.conditions import Conditions
 from .helium import HeliumLadders, Reduction, factor_helium
 from .populations import LevelPopulations
@@ -36,7 +35,12 @@ def helium_populations(
     pairs = (
         conditions.hydrogen_density_cm3 * conditions.electron_fraction * conditions.ionized_fraction
     )
-    source = pairs * _recombination(ladders, conditions)
+    source = pairs * helium_recombination_cm3_per_s(
+        ladders.bound_free,
+        conditions.matter_temperature_k,
+        conditions.radiation_temperature_k,
+        here.captured,
+    )
     for log_x, lines in zip(log_kept, here.kept_lines, strict=True):
         source += np.exp(log_x) * lines.out
     levels = ladders.levels
@@ -61,16 +65,6 @@ def helium_populations(
     )
     error = abs(left / fed - 1.0) if fed else 0.0
     return LevelPopulations(log_population, log_population - log_saha, error)
-
-
-def _recombination(ladders: HeliumLadders, conditions: Conditions) -> FloatArray:
-    """Recombination coefficient of every level, shape (n_levels,), cm^3 s^-1."""
-    levels, matter_k = ladders.levels, conditions.matter_temperature_k
-    spectrum = captured_spectrum(ladders.bound_free, conditions.radiation_temperature_k)
-    reach = ladders.bound_free.grid.energy * (levels.chi_ev / (const.BOLTZMANN_EV_K * matter_k))
-    volume = float(thermal_volume_cm3(matter_k, levels.nuclear_charge))
-    rates: FloatArray = (spectrum @ np.exp(-reach)) * volume
-    return rates
 
 
 def _leaving(here: Reduction, position: IntArray) -> FloatArray:

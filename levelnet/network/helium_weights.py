@@ -13,7 +13,6 @@ import numpy as np
 
 from .. import constants as const
 from ..arrays import FloatArray
-from ..atomic.helium_bound_free import captured_spectrum
 from ..atomic.helium_transitions import block_start, helium_blocks
 from .helium import HeliumLadders, Reduction, factor_helium, line_rates, reduce_factored
 from .weights import NodeWeights
@@ -40,11 +39,11 @@ def add_helium_node_weights(
         :func:`levelnet.atomic.helium_transitions.helium_places`.
     """
     here = factor_helium(ladders, radiation_temperature_k)
-    reduced = reduce_factored(ladders, here, radiation_temperature_k)
+    reduced = reduce_factored(ladders, here)
     n_kept, n_sets = len(ladders.kept), len(by_result)
     lower, upper = np.triu_indices(n_kept, 1)
     by_spectrum = by_result[:, len(lower) :].reshape(n_sets, n_kept, -1) / reduced.spectrum
-    captured = by_spectrum @ captured_spectrum(ladders.bound_free, radiation_temperature_k).T
+    captured = by_spectrum @ here.captured.T
     # Populations that stand for the kept levels: set, level reached, level left.
     kept = np.zeros((n_sets, n_kept, n_kept))
     talk = reduced.exchange[upper, lower] > 0.0
