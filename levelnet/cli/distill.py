@@ -23,6 +23,7 @@ if TYPE_CHECKING:
     from concurrent.futures import Executor
 
     from ..distilled.table import EffectiveTable
+    from ..history.setup import Setup
 
 NAME = "distill"
 SUMMARY = "distill a setup's atom to a table of effective rates"
@@ -91,11 +92,7 @@ def run(options: argparse.Namespace, console: Console) -> int:
     target = options.output or Path(f"{options.setup.stem}-table.h5")
     languages = tuple(dict.fromkeys(options.export or ()))
     check_target(target, options.force, options.setup)
-    check_exports(target, languages, options.force)
-    if languages:
-        from ..distilled.kept import check_exported_setup
-
-        check_exported_setup(setup)
+    check_exports(target, languages, options.force, setup)
     workers = worker_count(options.workers)
     if options.plan:
         from ..studies.plans import plan_distill
@@ -200,19 +197,19 @@ def export_name(target: Path) -> str:
     return (name if name[:1].isalpha() else f"rates_{name}")[:40]
 
 
-def check_exports(target: Path, languages: tuple[str, ...], force: bool) -> None:
+def check_exports(target: Path, languages: tuple[str, ...], force: bool, setup: Setup) -> None:
     """Refuse places that cannot be written before any work starts."""
     from ..store import check_output
 
     for language in languages:
-        for path in _export_paths(target, language):
+        for path in _export_paths(target, language, setup):
             check_output(path, force)
 
 
-def _export_paths(target: Path, language: str) -> tuple[Path, ...]:
+def _export_paths(target: Path, language: str, setup: Setup) -> tuple[Path, ...]:
     from ..store import export_paths
 
-    return export_paths(target.parent, export_name(target), language)
+    return export_paths(target.parent, export_name(target), language, setup)
 
 
 def write_exports(

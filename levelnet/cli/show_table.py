@@ -59,7 +59,7 @@ def show_table(
     """Print the summary of a table, and draw or export it where that was asked for."""
     _refuse(options, "use --export csv")
     languages = tuple(dict.fromkeys(options.export or ()))
-    check_exports(options.file, languages, options.force)
+    check_exports(options.file, languages, options.force, table.setup)
     written: list[Path] = []
     if folder is not None:
         from ..report.rates import save_table_figures

@@ -40,8 +40,9 @@ def about_lines(table: EffectiveTable) -> list[str]:
     resolved = f" (whole shells above n = {top})" if top < atom.n_max else ""
     # By its name, since nothing down here may import the top of the package.
     version = import_module("levelnet").__version__
+    species = "hydrogen" if table.helium is None else "hydrogen and helium"
     said = [
-        f"Effective rates of hydrogen, made by levelnet {version}; do not edit.",
+        f"Effective rates of {species}, made by levelnet {version}; do not edit.",
         "",
         f"title:       {json.dumps(setup.title)}",
         f"setup:       digest {setup.digest}; hydrogen n_max = {atom.n_max}{resolved}, "
@@ -51,6 +52,7 @@ def about_lines(table: EffectiveTable) -> list[str]:
         f"{setup.physics.fine_structure_change:g}, electron mass "
         f"{setup.physics.electron_mass_change:g}; what follows starts from the measured constants, "
         "so pass these changes to have those of the setup",
+        *_helium(table),
         *(f"overridden:  {json.dumps(f'{one.text} ({one.source})')}" for one in setup.rates.table),
         f"tolerance:   {table.tolerance:g} in the natural logarithm of each quantity",
         *certificate_lines(table.certificate),
@@ -65,6 +67,21 @@ def about_lines(table: EffectiveTable) -> list[str]:
         for part in (textwrap.wrap(line, _WIDTH, subsequent_indent=" " * 13) or [""])
     ]
     return [_harmless(line) for line in lines]
+
+
+def _helium(table: EffectiveTable) -> list[str]:
+    """What was distilled of helium."""
+    if table.helium is None:
+        return []
+    lines = table.setup.lines
+    choice = lines.helium_continuum
+    said = f"helium:      n_max = {table.setup.helium.n_max}, lines {lines.helium or 'sobolev'}"
+    if choice is not None:
+        said += (
+            f" (redistribution {choice.redistribution}, feedback {str(choice.feedback).lower()})"
+        )
+    ion = "Saha equilibrium" if table.helium_ion is None else "a network"
+    return [f"{said}, He II in {ion}; with the measured constants alone"]
 
 
 def _harmless(text: str) -> str:

@@ -7,9 +7,7 @@ from __future__ import annotations
 
 import re
 import textwrap
-from collections.abc import Callable, Iterable
-from importlib.resources import files
-from string import Template
+from collections.abc import Callable
 
 import numpy as np
 
@@ -18,26 +16,32 @@ from ..arrays import FloatArray
 from ..background.matter import compton_rate_per_s
 from ..errors import InputError
 from ..history.atom import open_lyman_lines, resonance_lines
+from ..history.setup import Setup
 from .about import about_lines, level_names, pair_names
+from .code_text import (
+    coefficient_values,
+    data_statement,
+    fill,
+    fortran_number,
+    in_braces,
+    number,
+    series_statements,
+    wrapped,
+)
 from .effective import NEVER
 from .grid_text import grid_text
-from .kept import check_without_field, check_without_helium
+from .helium_code import helium_c, helium_fortran
+from .helium_text import helium_endings, helium_texts
+from .kept import check_without_field
 from .stimulation import stimulation_c, stimulation_fortran, stimulation_polynomials
 from .table import COLLISIONS_K, EffectiveTable
 
 LANGUAGES = ("c99", "fortran", "csv")
 ENDINGS = {"c99": (".h", ".c"), "fortran": (".f90",), "csv": (".csv",)}
-"""Endings of the files of each export."""
+"""Endings of the files of each export, those of helium as text left out."""
 
 # A name in Fortran has at most 63 characters (ISO 1539-1:2018, 6.2.2); "_module" is added.
 _LONGEST_PREFIX = 40
-_WIDTH = 112
-
-
-class _Blanks(Template):
-    """A template whose blanks read @{name}; neither C nor Fortran has the sign."""
-
-    delimiter = "@"
 
 
 def exported_texts(table: EffectiveTable, language: str, name: str) -> dict[str, str]:
@@ -48,7 +52,8 @@ def exported_texts(table: EffectiveTable, language: str, name: str) -> dict[str,
     table : EffectiveTable
         What to export.
     language : "c99", "fortran" or "csv"
-        C99 source and header, a Fortran module, or a plain table of logarithms.
+        C99 source and header, a Fortran module, or a plain table of logarithms; helium, if the
+        table has its levels, is in the same code, or in tables of its own.
     name : str
         Name of the files without ending. In code it is the prefix of all global names: at most 40
         letters, digits and underscores, the first a letter.
@@ -65,9 +70,9 @@ def exported_texts(table: EffectiveTable, language: str, name: str) -> dict[str,
     """
     if language not in LANGUAGES:
         raise InputError(f'export = "{language}": allowed are {", ".join(LANGUAGES)}')
-    check_without_helium(table, f'export = "{language}"')
     if language == "csv":
-        return {f"{name}.csv": grid_text(table)}
+        texts = {".csv": grid_text(table)} | helium_texts(table)
+        return {f"{name}{end}": text for end, text in texts.items()}
     check_without_field(table.setup.lines)
     if not re.fullmatch(r"[A-Za-z][A-Za-z0-9_]*", name) or len(name) > _LONGEST_PREFIX:
         raise InputError(
@@ -82,46 +87,12 @@ def exported_texts(table: EffectiveTable, language: str, name: str) -> dict[str,
     for key in ("level_names", "pair_names", "line_names"):
         # Many names take several lines, each a comment of its own.
         blanks[key] = f"\n{start}    ".join(textwrap.wrap(blanks[key], 55))
-    return {f"{name}{end}": _fill(f"source{end}", blanks) for end in ENDINGS[language]}
+    return {f"{name}{end}": fill(f"source{end}", blanks) for end in ENDINGS[language]}
 
 
-def _fill(template: str, blanks: dict[str, str]) -> str:
-    text = files(__package__).joinpath("templates").joinpath(template).read_text(encoding="ascii")
-    return _Blanks(text).substitute(blanks)
-
-
-def number(value: float) -> str:
-    """Shortest text of a double that reads back the same."""
-    return repr(float(value))
-
-
-def fortran_number(value: float) -> str:
-    """Write the same as a double precision constant of Fortran."""
-    text = repr(float(value))
-    return text.replace("e", "d") if "e" in text else f"{text}d0"
-
-
-def coefficient_values(values: FloatArray) -> FloatArray:
-    """Coefficients as exported: to 1e-17, so that small ones take few digits.
-
-    The logarithms themselves, of order 10 to 30, carry a rounding of 4e-15. Cells beyond the range
-    may hold no number; nothing reads them.
-    """
-    return np.asarray(np.round(np.nan_to_num(values, nan=0.0), 17) + 0.0, dtype=float)
-
-
-def _wrapped(items: Iterable[str], indent: str, tail: str = ",") -> str:
-    """Items with commas between, in lines of at most 120 characters; `tail` ends all but one."""
-    lines = textwrap.wrap(", ".join(items), _WIDTH, break_long_words=False)
-    stripped = [line.rstrip(",") for line in lines]
-    return f"{tail}\n".join(indent + line for line in stripped)
-
-
-def _in_braces(items: Iterable[str]) -> str:
-    """Items of a short array of C: behind its brace, or on lines of their own if they are many."""
-    texts = list(items)
-    plain = ", ".join(texts)
-    return plain if len(plain) < 70 else "\n" + _wrapped(texts, "    ") + "\n"
+def endings(language: str, setup: Setup) -> tuple[str, ...]:
+    """Endings of the files of one export of a table of this setup."""
+    return (*ENDINGS[language], *(helium_endings(setup) if language == "csv" else ()))
 
 
 def _shared(table: EffectiveTable, name: str, show: Callable[[float], str]) -> dict[str, str]:
@@ -211,29 +182,30 @@ def _blanks_c(table: EffectiveTable, name: str) -> dict[str, str]:
     blanks = _shared(table, name, number)
     blanks["terms"] = str(table.departure.shape[-1])
     for key, values in _vectors(table).items():
-        blanks[key] = _in_braces(map(number, values))
+        blanks[key] = in_braces(map(number, values))
     for key, texts in _positions(table, 0).items():
-        blanks[key] = _in_braces(texts)
+        blanks[key] = in_braces(texts)
     for key in ("equilibrium", "exchange", "departure"):
         values = coefficient_values(getattr(table, key)).ravel()
-        blanks[key] = _wrapped(map(number, values), "    ")
+        blanks[key] = wrapped(map(number, values), "    ")
     blanks["escape"] = {
         "sobolev": "    return depth > 1e-8 ? -expm1(-depth) / depth : 1.0 - 0.5 * depth;",
         "open": "    (void)depth;\n    return 1.0;",
         "closed": "    (void)depth;\n    return 0.0;",
     }[table.setup.lines.hydrogen]
     terms = _stimulation(table)
-    return blanks | stimulation_c(_wrapped(map(number, terms.ravel()), "    "))
+    blanks |= helium_c(table, name)
+    return blanks | stimulation_c(wrapped(map(number, terms.ravel()), "    "))
 
 
 def _blanks_fortran(table: EffectiveTable, name: str) -> dict[str, str]:
     blanks = _shared(table, name, fortran_number)
     blanks["top"] = str(table.departure.shape[-1] - 1)
     for key, values in _vectors(table).items():
-        blanks[key] = _wrapped(map(fortran_number, values), "    ", ", &")
+        blanks[key] = wrapped(map(fortran_number, values), "    ", ", &")
     for key, texts in _positions(table, 1).items():
-        blanks[key] = _wrapped(texts, "    ", ", &")
-    blanks["data"] = "\n".join(_data_statements(table))
+        blanks[key] = wrapped(texts, "    ", ", &")
+    blanks["data"] = "\n".join(series_statements(table, ""))
     blanks["escape"] = {
         "sobolev": (
             "    escape_probability = 1.0_dp - 0.5_dp * depth\n"
@@ -243,21 +215,8 @@ def _blanks_fortran(table: EffectiveTable, name: str) -> dict[str, str]:
         "closed": "    escape_probability = 0.0_dp * depth",
     }[table.setup.lines.hydrogen]
     terms = _stimulation(table)
-    statements = [_data(f"stimulation_terms(:, {k + 1})", one) for k, one in enumerate(terms)]
+    statements = [
+        data_statement(f"stimulation_terms(:, {k + 1})", one) for k, one in enumerate(terms)
+    ]
+    blanks |= helium_fortran(table, name)
     return blanks | stimulation_fortran("\n".join(statements))
-
-
-def _data_statements(table: EffectiveTable) -> Iterable[str]:
-    """One statement for each polynomial: a statement may not go on for more than 255 lines."""
-    for cell in range(table.departure.shape[0]):
-        for key in ("equilibrium", "exchange"):
-            for i, values in enumerate(coefficient_values(getattr(table, key)[cell])):
-                yield _data(f"{key}(:, {i + 1}, {cell + 1})", values)
-        for cell_y, levels in enumerate(coefficient_values(table.departure[cell])):
-            for i, values in enumerate(levels):
-                yield _data(f"departure(:, :, {i + 1}, {cell_y + 1}, {cell + 1})", values.ravel())
-
-
-def _data(target: str, values: FloatArray) -> str:
-    numbers = _wrapped(map(fortran_number, values), "    ", ", &")
-    return f"  data {target} / &\n{numbers} /"

@@ -7,6 +7,7 @@ programmed anew; who needs the coefficients takes the C or Fortran source.
 from __future__ import annotations
 
 import math
+from collections.abc import Callable
 from typing import NamedTuple
 
 import numpy as np
@@ -41,6 +42,32 @@ class Grid(NamedTuple):
     others: FloatArray
 
 
+class Sheet(NamedTuple):
+    """What the head of a grid says of its rates; energies over the Boltzmann constant in K.
+
+    Attributes
+    ----------
+    levels : list of str
+        Names of the kept levels.
+    pairs : list of (str, str)
+        Names of each pair, lower level first.
+    ionization_k : ndarray, shape (n_kept,), K
+        Of each kept level.
+    barrier_k, rise_k, log_weight_ratio : ndarray, shape (n_pairs,)
+        As in :class:`levelnet.distilled.table.EffectiveTable`.
+    hottest_k : float, K
+        Matter above this and above the radiation is ionized by collisions.
+    """
+
+    levels: list[str]
+    pairs: list[tuple[str, str]]
+    ionization_k: FloatArray
+    barrier_k: FloatArray
+    rise_k: FloatArray
+    log_weight_ratio: FloatArray
+    hottest_k: float
+
+
 def table_grid(table: EffectiveTable, x: FloatArray, y: FloatArray) -> Grid:
     """Evaluate a table on a grid inside its rectangle of ln T_r and ln(T_m/T_r).
 
@@ -71,11 +98,47 @@ def grid_text(table: EffectiveTable, n_x: int = _ROWS, n_y: int = _RATIOS) -> st
     """
     low, high = np.log(table.radiation_range_k)
     x = np.linspace(low, high, n_x)
-    grid = table_grid(table, x, np.linspace(table.ratio_low, table.ratio_high, n_y))
+    y = np.linspace(table.ratio_low, table.ratio_high, n_y)
+    unit = table.scales.energy
+    pairs = [(one.split("-")[0], one.split("-")[1]) for one in pair_names(table)]
+    sheet = Sheet(
+        level_names(table.kept),
+        pairs,
+        table.saha.ionization_k * unit,
+        table.barrier_k * unit,
+        table.rise_k * unit,
+        table.log_weight_ratio,
+        COLLISIONS_K * unit,
+    )
+    return sheet_text(about_lines(table), sheet, lambda x, y: table_grid(table, x, y), x, y)
+
+
+def sheet_text(
+    head: list[str],
+    sheet: Sheet,
+    evaluate: Callable[[FloatArray, FloatArray], Grid],
+    x: FloatArray,
+    y: FloatArray,
+) -> str:
+    """Return rates on a grid as comma-separated text, comment lines first.
+
+    Parameters
+    ----------
+    head : list of str
+        First lines of the text.
+    sheet : Sheet
+        Names and energies.
+    evaluate : callable
+        Gives the grid at x and y, which it measures the error of a spline with.
+    x, y : ndarray
+        The grid, even in either.
+    """
+    grid = evaluate(x, y)
     blocks = [grid.others]
-    blocks += [grid.recombination[:, :, k] for k in range(len(table.kept))]
-    head = [*about_lines(table), "", *_explanation(table, grid), "", ",".join(_names(table, grid))]
-    lines = [f"# {line}".rstrip() for line in head]
+    blocks += [grid.recombination[:, :, k] for k in range(len(sheet.levels))]
+    middle = evaluate(0.5 * (x[1:] + x[:-1]), 0.5 * (y[1:] + y[:-1]))
+    said = [*head, "", *_explanation(sheet, grid, spline_error(grid, middle)), ""]
+    lines = [f"# {line}".rstrip() for line in (*said, ",".join(_names(sheet, grid)))]
     lines += [
         f"{x:.17g}," + ",".join(f"{value:.12g}" for value in row)
         for x, row in zip(grid.x, np.hstack(blocks), strict=True)
@@ -83,16 +146,13 @@ def grid_text(table: EffectiveTable, n_x: int = _ROWS, n_y: int = _RATIOS) -> st
     return "\n".join(lines) + "\n"
 
 
-def _others(table: EffectiveTable) -> list[tuple[str, str]]:
+def _others(sheet: Sheet) -> list[tuple[str, str]]:
     """Name and meaning of each column that depends on T_r alone."""
-    unit = table.scales.energy
-    ionization = table.saha.ionization_k * unit
     told = [
         (f"ln_photoionization_{name}", f"photoionization of {name}", f"exp({depth:.17g}/T_r)")
-        for name, depth in zip(level_names(table.kept), ionization, strict=True)
+        for name, depth in zip(sheet.levels, sheet.ionization_k, strict=True)
     ]
-    for names, barrier in zip(pair_names(table), table.barrier_k * unit, strict=True):
-        lower, upper = names.split("-")
+    for (lower, upper), barrier in zip(sheet.pairs, sheet.barrier_k, strict=True):
         told.append(
             (
                 f"ln_exchange_{upper}_to_{lower}",
@@ -103,26 +163,21 @@ def _others(table: EffectiveTable) -> list[tuple[str, str]]:
     return [(name, f"ln of {what} in 1/s, times {factor}") for name, what, factor in told]
 
 
-def _upward(table: EffectiveTable) -> list[str]:
-    rows = zip(pair_names(table), table.log_weight_ratio, table.rise_k, strict=True)
+def _upward(sheet: Sheet) -> list[str]:
+    rows = zip(sheet.pairs, sheet.log_weight_ratio, sheet.rise_k, strict=True)
     return [
-        f"ln of rate {name.replace('-', ' to ')} = ln of the rate down + {weights:.17g} - "
-        f"{rise * table.scales.energy:.17g}/T_r"
-        for name, weights, rise in rows
+        f"ln of rate {' to '.join(names)} = ln of the rate down + {weights:.17g} - {rise:.17g}/T_r"
+        for names, weights, rise in rows
     ]
 
 
-def _names(table: EffectiveTable, grid: Grid) -> list[str]:
+def _names(sheet: Sheet, grid: Grid) -> list[str]:
     ratios = [f"{ratio:.6g}" for ratio in np.exp(grid.y)]
-    captures = [
-        f"ln_recombination_{name}_at_{ratio}"
-        for name in level_names(table.kept)
-        for ratio in ratios
-    ]
-    return ["ln_radiation_temperature", *(name for name, _ in _others(table)), *captures]
+    captures = [f"ln_recombination_{name}_at_{ratio}" for name in sheet.levels for ratio in ratios]
+    return ["ln_radiation_temperature", *(name for name, _ in _others(sheet)), *captures]
 
 
-def _explanation(table: EffectiveTable, grid: Grid) -> list[str]:
+def _explanation(sheet: Sheet, grid: Grid, error: float) -> list[str]:
     n_x, n_y, _ = grid.recombination.shape
     first = grid.others.shape[1] + 2
     lines = [
@@ -131,8 +186,8 @@ def _explanation(table: EffectiveTable, grid: Grid) -> list[str]:
         "Column 1 has 17 significant digits, the others have 12.",
         "column 1: ln T_r",
     ]
-    lines += [f"column {number}: {what}" for number, (_, what) in enumerate(_others(table), 2)]
-    for k, name in enumerate(level_names(table.kept)):
+    lines += [f"column {number}: {what}" for number, (_, what) in enumerate(_others(sheet), 2)]
+    for k, name in enumerate(sheet.levels):
         start = first + k * n_y
         lines.append(
             f"columns {start} to {start + n_y - 1}: ln of recombination into {name} in cm^3/s, "
@@ -140,24 +195,23 @@ def _explanation(table: EffectiveTable, grid: Grid) -> list[str]:
         )
     step = (grid.y[-1] - grid.y[0]) / (n_y - 1)
     lines += [
-        *_upward(table),
+        *_upward(sheet),
         f"values of T_m/T_r: exp({grid.y[0]:.17g} + k {step:.17g}), k = 0 to {n_y - 1}",
-        f"matter above {COLLISIONS_K * table.scales.energy:g} K and above T_r: there to fill the",
+        f"matter above {sheet.hottest_k:g} K and above T_r: there to fill the",
         "  rectangle for splines, not to be used; collisional ionization is left out",
         "interpolation rule: cubic spline (not-a-knot ends) in ln T_r and ln(T_m/T_r); nothing",
         "  outside. Largest error of the logarithms, measured half-way between the grid points",
-        f"  against the table: {spline_error(table, grid):.1e}",
+        f"  against the table: {error:.1e}",
     ]
     return lines
 
 
-def spline_error(table: EffectiveTable, grid: Grid) -> float:
-    """Largest error of the logarithms from the spline, half-way between the points of a grid."""
+def spline_error(grid: Grid, middle: Grid) -> float:
+    """Largest error of the logarithms from the spline through `grid`, at the points of `middle`."""
     from scipy.interpolate import CubicSpline
 
-    truth = table_grid(table, 0.5 * (grid.x[1:] + grid.x[:-1]), 0.5 * (grid.y[1:] + grid.y[:-1]))
-    between = CubicSpline(grid.y, CubicSpline(grid.x, grid.recombination)(truth.x), axis=1)
-    errors = [between(truth.y) - truth.recombination]
+    between = CubicSpline(grid.y, CubicSpline(grid.x, grid.recombination)(middle.x), axis=1)
+    errors = [between(middle.y) - middle.recombination]
     known = np.isfinite(grid.others).all(axis=0)
-    errors.append(CubicSpline(grid.x, grid.others[:, known])(truth.x) - truth.others[:, known])
+    errors.append(CubicSpline(grid.x, grid.others[:, known])(middle.x) - middle.others[:, known])
     return max(float(np.max(np.abs(one), initial=0.0)) for one in errors)

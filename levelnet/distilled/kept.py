@@ -215,20 +215,10 @@ def _mass_fraction(cosmology: Cosmology) -> float:
 def check_without_helium(table: EffectiveTable, who: str) -> None:
     """Refuse a table with levels of helium for what knows hydrogen alone."""
     if table.helium is not None:
-        _refuse_helium(who)
-
-
-def check_exported_setup(setup: Setup) -> None:
-    """Refuse to make for export what exports do not know."""
-    if setup.helium_recombines:
-        _refuse_helium("export")
-
-
-def _refuse_helium(who: str) -> None:
-    raise InputError(
-        f"{who}: knows hydrogen alone, and this table holds levels of helium; distil the setup "
-        "with helium.n_max = 0"
-    )
+        raise InputError(
+            f"{who}: knows hydrogen alone, and this table holds levels of helium; distil the setup "
+            "with helium.n_max = 0"
+        )
 
 
 def check_without_field(lines: Lines) -> None:

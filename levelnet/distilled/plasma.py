@@ -117,7 +117,7 @@ def plasma_of(
     table: EffectiveTable, hydrogen: Atom, cosmology: Cosmology, low: float, high: float
 ) -> Plasma:
     """Pack a table with helium and a universe from s = ln a = `low` to `high` for the kernels."""
-    first, second, lines, saha = _packed(table)
+    first, second, lines, saha = packed(table)
     return Plasma(
         hydrogen,
         first,
@@ -155,7 +155,7 @@ def electrons_with(ionized: FloatArray, helium: FastHelium, cosmology: Cosmology
 
 
 @lru_cache(maxsize=8)
-def _packed(table: EffectiveTable) -> tuple[Atom, Atom, HeliumLines, FloatArray]:
+def packed(table: EffectiveTable) -> tuple[Atom, Atom, HeliumLines, FloatArray]:
     """He I, He II (or He I again, unused), the lines, and Saha coefficients of the three ions."""
     stage, ion, lines = table.helium, table.helium_ion, table.helium_lines
     assert stage is not None and lines is not None

@@ -9,13 +9,14 @@ from .whole_file import check_output, whole_file
 
 if TYPE_CHECKING:
     from ..distilled.table import EffectiveTable
+    from ..history.setup import Setup
 
 
-def export_paths(folder: str | Path, name: str, language: str) -> tuple[Path, ...]:
-    """Files that :func:`write_export` writes."""
-    from ..distilled.export import ENDINGS
+def export_paths(folder: str | Path, name: str, language: str, setup: Setup) -> tuple[Path, ...]:
+    """Files that :func:`write_export` writes for a table of this setup."""
+    from ..distilled.export import endings
 
-    return tuple(Path(folder) / f"{name}{end}" for end in ENDINGS[language])
+    return tuple(Path(folder) / f"{name}{end}" for end in endings(language, setup))
 
 
 def write_export(

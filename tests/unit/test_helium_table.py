@@ -19,10 +19,8 @@ from scipy.interpolate import make_interp_spline
 import levelnet
 from levelnet.background.cosmology import Cosmology
 from levelnet.distilled import helium_escape
-from levelnet.distilled.export import exported_texts
 from levelnet.distilled.helium_errors import fresh_equations, helium_errors
 from levelnet.distilled.history import history_from_table
-from levelnet.distilled.kept import check_exported_setup
 from levelnet.distilled.local import rate_of_change
 from levelnet.distilled.plasma import plasma_of
 from levelnet.distilled.prepared import make_atom
@@ -46,7 +44,7 @@ from levelnet.kernels.plasma_steps import saha_state
 from levelnet.store import TABLE_LAYOUT, read_table, write_distilled, write_distilled_csv
 from tests.helium_tables import PIECES, helium_setup, helium_table
 from tests.same_records import assert_same
-from tests.small_runs import COSMOLOGY, small_setup
+from tests.small_runs import COSMOLOGY
 from tests.small_tables import small_table
 
 # Table against the series behind it: 1e-8 in every logarithm; sums of them cancel a little.
@@ -342,16 +340,7 @@ def test_without_helium_in_the_universe_hydrogen_is_alone() -> None:
     assert history.free_electron_fraction.tobytes() == alone.free_electron_fraction.tobytes()
 
 
-def test_exports_are_refused_before_any_work() -> None:
-    check_exported_setup(small_setup(4))
-    with pytest.raises(InputError, match="export: knows hydrogen alone"):
-        check_exported_setup(helium_setup())
-
-
-def test_exports_and_the_bare_right_hand_side_know_hydrogen_alone() -> None:
-    for language in ("c99", "fortran", "csv"):
-        with pytest.raises(InputError, match="knows hydrogen alone"):
-            exported_texts(helium_table(), language, "rates")
+def test_the_bare_right_hand_side_knows_hydrogen_alone() -> None:
     with pytest.raises(InputError, match="rate_of_change: knows hydrogen alone"):
         rate_of_change(helium_table(), hydrogen_density_cm3=1.0, electron_fraction=0.5,
                        matter_temperature_k=3000.0, radiation_temperature_k=3000.0,

@@ -145,5 +145,11 @@ def test_commands(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
     assert "helium.n_max = 4, but the table" in capsys.readouterr().err
     assert main(["history", str(table), "--helium-mass-fraction", "0.7"]) == 2
     assert "checked from 0.1 to 0.4" in capsys.readouterr().err
+    exports = [word for name in ("c99", "fortran", "csv") for word in ("--export", name)]
+    assert main(["show", str(table), *exports]) == 0
+    written = ("t.c", "t.h", "t.f90", "t.csv", "t-he1.csv", "t-he2.csv")
+    assert all((tmp_path / name).is_file() for name in written)
+    (tmp_path / "t.csv").unlink()
     assert main(["show", str(table), "--export", "csv"]) == 2
-    assert "knows hydrogen alone" in capsys.readouterr().err
+    assert "t-he1.csv" in capsys.readouterr().err
+    assert not (tmp_path / "t.csv").exists()

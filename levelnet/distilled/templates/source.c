@@ -367,3 +367,4 @@ int @{prefix}_right_hand_side(const @{prefix}_conditions *conditions, @{prefix}_
         slopes->compton_rate_per_s * (at->radiation_temperature_k - at->matter_temperature_k);
     return @{PREFIX}_OK;
 }
+@{helium_source}

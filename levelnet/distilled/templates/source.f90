@@ -139,7 +139,7 @@ module @{prefix}_module
   ! Power of t in y, power of t in x, level, cell in y, cell in x.
   real(dp), save :: departure(0:top, 0:top, n_kept, cells_y, cells_x)
 @{stimulation_table}
-@{data}
+@{data}@{helium_data}
 
 contains
 
@@ -483,4 +483,4 @@ contains
     status = status_ok
   end subroutine solve
 
-end module @{prefix}_module
+@{helium_code}end module @{prefix}_module

@@ -90,7 +90,7 @@ int @{prefix}_log_rates(double radiation_temperature_k, double matter_temperatur
    2s-1s: @{two_photon_rule}. */
 int @{prefix}_right_hand_side(const @{prefix}_conditions *conditions, @{prefix}_slopes *slopes);
 
-#ifdef __cplusplus
+@{helium_header}#ifdef __cplusplus
 }
 #endif
 
