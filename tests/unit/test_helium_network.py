@@ -175,9 +175,7 @@ def ladders_of(n_max: int, higher: HigherLines) -> HeliumLadders:
 @pytest.mark.parametrize("n_max", [30, pytest.param(100, marks=pytest.mark.slow)])
 @pytest.mark.parametrize("higher", ["closed", "free", "feedback"])
 @pytest.mark.parametrize("temperature_k", [1500.0, 3000.0, 6000.0, 12_000.0, 25_000.0])
-def test_departures_with_many_levels(
-    temperature_k: float, higher: HigherLines, n_max: int
-) -> None:
+def test_departures_with_many_levels(temperature_k: float, higher: HigherLines, n_max: int) -> None:
     """Law: the same with many levels, reduced at this T_r itself, whichever lines are open."""
     ladders = ladders_of(n_max, higher)
     value, constants = reduce_helium(ladders, temperature_k), helium_rate_constants(ladders)
