@@ -97,8 +97,8 @@ def test_cross_section_of_fast_electrons_against_mpmath(n: int, l: int, spin: in
     # unit energy density, with the phase of Drake's defect of the channel continued to this energy
     # (quantum-defect method: Burgess & Seaton 1960, MNRAS 120, 121). Kept at the threshold, the
     # defects would give 1.5 per cent less and 1.6 more. The integral begins at the core radius of
-    # the higher l, further in only the regular part means something: that part, and twice the radius,
-    # are 0.1 per cent each. Ratios, because pytest.approx lets 1e-12 pass by default.
+    # the higher l, further in only the regular part means something: that part, and twice the
+    # radius, are 0.1 per cent each. Ratios, because pytest.approx lets 1e-12 pass by default.
     node = int(np.searchsorted(ATOM.grid.energy, 0.4))
     energy = float(ATOM.grid.energy[node])
     assert 0.4 < energy < 0.55

@@ -63,8 +63,8 @@ def test_polarization_meets_the_published_terms() -> None:
 @pytest.mark.parametrize("spin", [0, 1])
 @pytest.mark.parametrize("l", [0, 1, 2, 3])
 def test_low_levels_follow_the_series(l: int, spin: int) -> None:
-    # Levels n = 3 to 10 have NIST's terms. Drake's series, another source, puts each where it is, as
-    # far as its entry says: 0.18 cm^-1 at n = 3, 0.03 above.
+    # Levels n = 3 to 10 have NIST's terms. Drake's series, another source, puts each where it is,
+    # as far as its entry says: 0.18 cm^-1 at n = 3, 0.03 above.
     levels = helium_levels(10)
     for n in range(max(3, l + 1), 11):
         nu = float(n)

@@ -19,10 +19,10 @@ from tests.tolerances import ROUND_OFF
 LEVELS = helium_levels(40)
 LINES = helium_lines(LEVELS)
 
-# Rates of the Coulomb approximation over those of `helium/transition_rates`, line by line: the column
-# of the README, frozen to its last digit. That the computed rates are those of the approximation is
-# held against mpmath below; what it leaves out is what the electron does in the core. No line is off
-# by more than "a few per cent" (4), which is all that the approximation promises.
+# Rates of the Coulomb approximation over those of `helium/transition_rates`, line by line: the
+# column of the README, frozen to its last digit. That the computed rates are those of the
+# approximation is held against mpmath below; what it leaves out is what the electron does in the
+# core. No line is off by more than "a few per cent" (4), which is all that is promised of it.
 RATIO = {
     ("2 1P", "2 1S"): 0.992,
     ("3 1P", "2 1S"): 0.978,
@@ -223,7 +223,7 @@ def continuum() -> HeliumBoundFree:
 
 
 def exchange_strength(n: int, l: int) -> float:
-    """Strength of the line n p to the 1s of the core, from one electron alone: half of n 1P - 1 1S."""
+    """Strength of the line n p to the 1s of the core from one electron: half of n 1P - 1 1S."""
     if l != 1:
         return 0.0
     omega = LEVELS.energy_ev[LEVELS.index(n, 1, 0)] / (2 * const.RYDBERG_EV)
@@ -234,9 +234,9 @@ def exchange_strength(n: int, l: int) -> float:
 @pytest.mark.parametrize("name", ["2 1S", "2 3S", "3 3S", "3 1P", "3 3D", "2 1P", "2 3P", "4 3F"])
 def test_sum_rule_of_the_outer_electron(name: str, continuum: HeliumBoundFree) -> None:
     # Thomas-Reiche-Kuhn: the strengths of all lines and the continuum of one electron add up to 1,
-    # for a local potential. In its fall from p to the 1s of the core the two electrons count as one:
-    # singlets have that line twice as strong, triplets not at all (Pauli), so their sums lie below
-    # and above 1 by the strength x of one electron.
+    # for a local potential, and the line from p down to the 1s of the core is in it. Of a pair of
+    # electrons singlets have that line twice as strong as one has it, x, and triplets not at all
+    # (Pauli): sums 1 - x and 1 + x.
     n, l, spin = term_numbers(name)
     level = LEVELS.index(n, l, spin)
     lines, free = absorption_strengths(LINES, level), continuum_strength(continuum, level)

@@ -60,8 +60,8 @@ def test_energy_and_rate() -> None:
     planck = const.PLANCK_EV_S * const.SPEED_OF_LIGHT_CM_S * 1e8
     assert planck / transition_energy_ev() == pytest.approx(601.404, abs=1e-3)
     # Lifetime of 2 1S: 19.7 +- 1.0 ms, measured (Van Dyck, Johnson & Shugart 1971, Phys. Rev. A 4,
-    # 1327; from memory). Another calculation: 51.3 per s, 0.6 per cent off (Drake, Victor & Dalgarno
-    # 1969; from memory).
+    # 1327; from memory). Another calculation: 51.3 per s, 0.6 per cent off (Drake, Victor &
+    # Dalgarno 1969; from memory).
     assert abs(1e3 / TWO_PHOTON_PER_S - 19.7) < 1.0
     assert pytest.approx(51.3, rel=0.006) == TWO_PHOTON_PER_S
 

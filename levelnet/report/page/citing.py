@@ -64,7 +64,7 @@ def citing_section(
 
 def _merged(works: Iterable[Work]) -> dict[Work, list[str]]:
     """Publications with all uses of each, in the order of their first use."""
-    found: dict[tuple[str, int, str], tuple[Work, list[str]]] = {}
+    found: dict[tuple[str, int | None, str], tuple[Work, list[str]]] = {}
     for one in works:
         _, uses = found.setdefault((one.authors, one.year, one.place), (one, []))
         if one.use not in uses:
@@ -128,7 +128,8 @@ def _kind(work: Work, key: str) -> tuple[str, str, dict[str, str]]:
         fields["title"] = f"{{{title}}}"
         if publisher:
             fields["publisher"] = publisher
-    fields["year"] = str(work.year)
+    if work.year is not None:
+        fields["year"] = str(work.year)
     if work.doi:
         fields["doi"] = work.doi
     return kind, key, fields
@@ -144,7 +145,7 @@ def _authors(text: str) -> str:
 def _key(work: Work) -> str:
     first = re.split(r"[,;& ]", work.authors)[0]
     plain = unicodedata.normalize("NFKD", first).encode("ascii", "ignore").decode()
-    return re.sub(r"[^A-Za-z]", "", plain) + str(work.year)
+    return re.sub(r"[^A-Za-z]", "", plain) + str(work.year or "")
 
 
 def _entry(kind: str, key: str, fields: dict[str, str]) -> str:
@@ -158,5 +159,5 @@ def _escaped(text: str) -> str:
 
 def _table_row(one: TableSource) -> tuple[str, str, str]:
     doi = f", doi:{one.doi}" if one.doi else ""
-    source = f"{one.authors} {one.year}, {one.journal}{doi}"
+    source = f"{one.authors_and_year}, {one.journal}{doi}"
     return f"{one.name}: {one.quantity}", source, f"{one.place}; {one.obtained}"
