@@ -58,8 +58,8 @@ class TableSource:
         Names, units and kinds.
     authors, journal, doi, place : str
         The publication and where in it; empty where unknown.
-    year : int
-        Year of the publication (the latest one, where there are several).
+    year : int or None
+        Year of the publication (the latest one, where there are several); None where unknown.
     obtained, digits, valid, disagreements : str
         How the numbers came here, how exact they are, where they hold, who differs.
     sha256 : str
@@ -71,7 +71,7 @@ class TableSource:
     axis: str
     columns: tuple[Column, ...]
     authors: str
-    year: int
+    year: int | None
     journal: str
     doi: str
     place: str
@@ -80,6 +80,11 @@ class TableSource:
     valid: str
     disagreements: str
     sha256: str
+
+    @property
+    def authors_and_year(self) -> str:
+        """Authors, and the year where it is known."""
+        return self.authors if self.year is None else f"{self.authors} {self.year}"
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -160,12 +165,12 @@ def _source(name: str, entry: Any) -> TableSource:
     """Turn one entry of the catalogue into a record; a missing or strange field is a TableError."""
     try:
         columns = tuple(Column(**column) for column in entry["columns"])
-        source = TableSource(name, **{**entry, "columns": columns})
+        source = TableSource(name, **{"year": None, **entry, "columns": columns})
     except (KeyError, TypeError) as error:
         raise TableError(f"table {name}: bad entry in {_CATALOGUE}: {error}") from None
     texts = [getattr(source, field) for field in _TEXT_FIELDS]
     texts += [text for column in columns for text in (column.name, column.unit, column.kind)]
-    if not all(isinstance(text, str) for text in texts) or not isinstance(source.year, int):
+    if not all(isinstance(text, str) for text in texts) or not isinstance(source.year, int | None):
         raise TableError(f"table {name}: bad entry in {_CATALOGUE}: a field of the wrong type")
     if source.axis not in {column.name for column in columns if column.kind == "number"}:
         raise TableError(f"table {name}: axis {source.axis} is not a number column")

@@ -79,7 +79,8 @@ def helium_bound_free(levels: HeliumLevels) -> HeliumBoundFree:
         of single levels within 0.3 per cent, their sum 1e-6. Channels of the levels n = 2 carry the
         factors of the lines they continue (:func:`levelnet.atomic.helium_lines.channel_factors`, up
         to 3.7 per cent). l from 3: hydrogenic. Case-B totals lie 0.2 per cent (1e3 K) to 0.8 per
-        cent (2.5e4 K) above those of Hummer & Storey 1998.
+        cent (2.5e4 K) above those of Hummer & Storey 1998, with hydrogen's shells added above
+        n_max: without them n_max = 30 is 8.8 per cent low at 1e3 K.
 
     Notes
     -----

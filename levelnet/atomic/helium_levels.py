@@ -134,7 +134,8 @@ def helium_levels(n_max: int, hydrogenic: bool = False) -> HeliumLevels:
     HeliumLevels
         l up to 3: the published terms up to n = 10 (0.01 cm^-1), above them series of quantum
         defects (better than 0.003 cm^-1). From l = 4: hydrogenic with the polarization of the core,
-        within 0.012 cm^-1 of the published terms. Fine structure is averaged.
+        within 0.006 cm^-1 of the published terms, which are rounded to 0.01. Fine structure is
+        averaged.
 
     Notes
     -----

@@ -41,7 +41,7 @@ def run(options: argparse.Namespace, console: Console) -> int:
 
 def table_text(table: TableSource) -> str:
     """Return what is known of a table as lines; facts that are not known are left out."""
-    published = (f"{table.authors} {table.year}", table.journal, table.place, table.doi)
+    published = (table.authors_and_year, table.journal, table.place, table.doi)
     facts = {
         "quantity": table.quantity,
         "source": ", ".join(part for part in published if part),

@@ -19,19 +19,21 @@ from tests.tolerances import ROUND_OFF
 LEVELS = helium_levels(40)
 LINES = helium_lines(LEVELS)
 
-# How far the Coulomb approximation is off, line by line, from the published rates of
-# `helium/transition_rates`, rounded up. What it leaves out is what the electron does in the core.
-DEVIATION = {
-    ("2 1P", "2 1S"): 0.010,
-    ("3 1P", "2 1S"): 0.023,
-    ("3 1S", "2 1P"): 0.016,
-    ("3 1D", "2 1P"): 0.002,
-    ("4 1D", "2 1P"): 0.006,
-    ("2 3P", "2 3S"): 0.002,
-    ("3 3P", "2 3S"): 0.037,
-    ("3 3S", "2 3P"): 0.005,
-    ("3 3D", "2 3P"): 0.015,
-    ("4 3D", "2 3P"): 0.018,
+# Rates of the Coulomb approximation over those of `helium/transition_rates`, line by line: the
+# column of the README, frozen to its last digit. That the computed rates are those of the
+# approximation is held against mpmath below; what it leaves out is what the electron does in the
+# core. No line is off by more than "a few per cent" (4), which is all that is promised of it.
+RATIO = {
+    ("2 1P", "2 1S"): 0.992,
+    ("3 1P", "2 1S"): 0.978,
+    ("3 1S", "2 1P"): 0.985,
+    ("3 1D", "2 1P"): 1.001,
+    ("4 1D", "2 1P"): 1.004,
+    ("2 3P", "2 3S"): 1.000,
+    ("3 3P", "2 3S"): 0.964,
+    ("3 3S", "2 3P"): 0.996,
+    ("3 3D", "2 3P"): 1.013,
+    ("4 3D", "2 3P"): 1.016,
 }
 
 # NIST Atomic Spectra Database, s^-1 (from memory), and how far the computed rate may be off.
@@ -72,11 +74,13 @@ def coulomb_lines() -> HeliumLines:
     )
 
 
-@pytest.mark.parametrize(("line", "deviation"), DEVIATION.items())
+@pytest.mark.parametrize(("line", "ratio"), RATIO.items())
 def test_coulomb_approximation_against_published_rates(
-    line: tuple[str, str], deviation: float, coulomb_lines: HeliumLines
+    line: tuple[str, str], ratio: float, coulomb_lines: HeliumLines
 ) -> None:
-    assert rate(coulomb_lines, *line) == pytest.approx(published_rates_per_s()[line], rel=deviation)
+    got = rate(coulomb_lines, *line) / published_rates_per_s()[line]
+    assert got == pytest.approx(1.0, abs=0.04)
+    assert got == pytest.approx(ratio, abs=5.1e-4)
 
 
 @pytest.mark.parametrize("line", [("3 3P", "2 3S"), ("3 1D", "2 1P"), ("4 3D", "2 3P")])
@@ -162,11 +166,22 @@ def test_no_line_between_spins_or_by_other_than_one_unit_of_l() -> None:
     assert rate(LINES, "3 1S", "2 1S") == 0.0
 
 
-def test_factors_continue_the_published_lines() -> None:
-    # Six series begin at n = 2; lines with no published rate take the factor of the last with one.
+def test_factors_continue_the_published_lines(coulomb_lines: HeliumLines) -> None:
+    # Six series begin at n = 2; lines with no published rate take the factor of the last with one:
+    # published over computed rate, computed here with a larger atom.
     factors = module.channel_factors()
-    assert len(factors) == 6
-    assert all(abs(factor - 1) < 0.037 for _, factor in factors.values())
+    lasts = ("3 1P", "2 1S"), ("3 1S", "2 1P"), ("4 1D", "2 1P")
+    lasts += ("3 3P", "2 3S"), ("3 3S", "2 3P"), ("4 3D", "2 3P")
+    expected = {
+        (term_numbers(lower), term_numbers(upper)[1]): (
+            term_numbers(upper)[0],
+            pytest.approx(
+                published_rates_per_s()[upper, lower] / rate(coulomb_lines, upper, lower), rel=1e-9
+            ),
+        )
+        for upper, lower in lasts
+    }
+    assert factors == expected
     plain = module._computed(helium_levels(6), 1, dipole_blocks(6))
     lines = helium_lines(helium_levels(6))
     last, factor = factors[(2, 0, 1), 1]
@@ -207,31 +222,37 @@ def continuum() -> HeliumBoundFree:
     return helium_bound_free(LEVELS)
 
 
-OUTER_SUMS = {
-    "2 1S": 0.012,
-    "2 3S": 0.015,
-    "3 3S": 0.005,
-    "3 1P": 0.015,
-    "3 3D": 0.006,
-    "2 1P": 0.035,
-    "2 3P": 0.07,
-    "4 3F": 0.005,
-}
+def exchange_strength(n: int, l: int) -> float:
+    """Strength of the line n p to the 1s of the core from one electron: half of n 1P - 1 1S."""
+    if l != 1:
+        return 0.0
+    omega = LEVELS.energy_ev[LEVELS.index(n, 1, 0)] / (2 * const.RYDBERG_EV)
+    strength = LINES.einstein_a(LEVELS.index(n, 1, 0), 0) * const.ATOMIC_TIME_S
+    return 0.5 * float(strength / (2 * const.FINE_STRUCTURE**3 * omega**2))
 
 
-@pytest.mark.parametrize(("name", "error"), OUTER_SUMS.items())
-def test_sum_rule_of_the_outer_electron(
-    name: str, error: float, continuum: HeliumBoundFree
-) -> None:
+@pytest.mark.parametrize("name", ["2 1S", "2 3S", "3 3S", "3 1P", "3 3D", "2 1P", "2 3P", "4 3F"])
+def test_sum_rule_of_the_outer_electron(name: str, continuum: HeliumBoundFree) -> None:
     # Thomas-Reiche-Kuhn: the strengths of all lines and the continuum of one electron add up to 1,
-    # for a local potential. The core shows in 2P, where its exchange is felt most.
-    level = LEVELS.index(*term_numbers(name))
-    total = absorption_strengths(LINES, level) + continuum_strength(continuum, level)
-    assert total == pytest.approx(1.0, abs=error)
+    # for a local potential, and the line from p down to the 1s of the core is in it. Of a pair of
+    # electrons singlets have that line twice as strong as one has it, x, and triplets not at all
+    # (Pauli): sums 1 - x and 1 + x.
+    n, l, spin = term_numbers(name)
+    level = LEVELS.index(n, l, spin)
+    lines, free = absorption_strengths(LINES, level), continuum_strength(continuum, level)
+    x = exchange_strength(n, l)
+    # Cross sections of excited levels are published within 3 per cent (thresholds, see
+    # test_helium_bound_free), lines met within 0.5 (COMPUTED); x would be exact if 1s were the same
+    # orbital in He and He+: half of it is allowed for.
+    error = 0.03 * free + 0.005 * abs(lines) + 0.5 * x
+    assert lines + free == pytest.approx(1.0 + (x if spin else -x), abs=error)
 
 
 # Absorption oscillator strengths (Drake 1996, Springer Handbook of Atomic, Molecular & Optical
-# Physics, ch. 11; from memory). Theirs have the infinite nuclear mass taken out or not: 3e-4.
+# Physics, ch. 11; from memory). Theirs have the infinite nuclear mass taken out or not: 3e-4. The
+# rates of all of these lines are published ones: what is tested is that the rates of the table, its
+# energies and weights give these strengths, which came another way; nothing here is computed by
+# levelnet. Strengths that are: COMPUTED, and n = 5 to 9 of the resonance lines below.
 OSCILLATOR = {
     ("2 1P", "1 1S"): 0.27616,
     ("3 1P", "1 1S"): 0.07344,
@@ -246,7 +267,9 @@ OSCILLATOR = {
 
 
 @pytest.mark.parametrize(("line", "published"), OSCILLATOR.items())
-def test_oscillator_strengths(line: tuple[str, str], published: float) -> None:
+def test_published_rates_and_energies_give_the_oscillator_strengths(
+    line: tuple[str, str], published: float
+) -> None:
     upper, lower = (LEVELS.index(*term_numbers(name)) for name in line)
     omega = (LEVELS.energy_ev[upper] - LEVELS.energy_ev[lower]) / (2 * const.RYDBERG_EV)
     strength = LINES.einstein_a(upper, lower) * const.ATOMIC_TIME_S
@@ -267,7 +290,7 @@ def test_resonance_lines_follow_the_series() -> None:
     # (Samson et al. 1994, J. Phys. B 27, 887; from memory).
     sigma = 2 * np.pi**2 * const.FINE_STRUCTURE * const.BOHR_RADIUS_CM**2
     sigma *= strength[-1] * LEVELS.effective_n[p][-1] ** 3
-    assert sigma == pytest.approx(7.40e-18, rel=0.01)
+    assert sigma / 7.40e-18 == pytest.approx(1.0, abs=0.01)
 
 
 def test_resonance_lines_are_the_first_row_of_the_singlets() -> None:
@@ -286,7 +309,11 @@ def test_ground_lines() -> None:
     lengths = 1e8 * PER_CM_EV / lines.energy_ev
     for position, expected in ((0, 584.334), (39, 591.412), (41, 625.563)):
         assert lengths[position] == pytest.approx(expected, abs=1e-3)
-    assert lines.rate_per_s[39:].tolist() == [177.6, 0.324, 1.272e-4]
+    # 2 3P1: 177 +- 8 per s, measured (Dall et al. 2008, Phys. Rev. Lett. 100, 023001; from memory);
+    # 2 3P2: 0.327 calculated (Drake 1969, Astrophys. J. 158, 1199; from memory), the 0.324 of the
+    # table measured to 5 per cent.
+    assert abs(lines.rate_per_s[39] - 177.0) < 8.0
+    assert lines.rate_per_s[40] == pytest.approx(0.327, rel=0.05)
     assert lines.statistical_weight[39:].tolist() == [3, 5, 3]
     np.testing.assert_allclose(lines.share[39:], [3 / 9, 5 / 9, 1])
     assert [LEVELS.name(one) for one in lines.level[39:]] == ["2 3P", "2 3P", "2 3S"]

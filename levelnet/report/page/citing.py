@@ -64,7 +64,7 @@ def citing_section(
 
 def _merged(works: Iterable[Work]) -> dict[Work, list[str]]:
     """Publications with all uses of each, in the order of their first use."""
-    found: dict[tuple[str, int, str], tuple[Work, list[str]]] = {}
+    found: dict[tuple[str, int | None, str], tuple[Work, list[str]]] = {}
     for one in works:
         _, uses = found.setdefault((one.authors, one.year, one.place), (one, []))
         if one.use not in uses:
@@ -102,13 +102,12 @@ def program_entry(origins: Sequence[Origin]) -> str:
 
 def bibtex(works: Sequence[Work]) -> list[str]:
     """One entry each; keys are surname and year, with a letter where two would be the same."""
-    keys: list[str] = []
+    plain = [_key(one) for one in works]
     entries = []
-    for one in works:
-        plain = _key(one)
-        taken = sum(key.rstrip("abcdefgh") == plain for key in keys)
-        keys.append(plain + ("" if not taken else "abcdefgh"[taken]))
-        entries.append(_entry(*_kind(one, keys[-1])))
+    for count, one in enumerate(works):
+        taken = plain[:count].count(plain[count])
+        key = plain[count] + ("" if not taken else "abcdefgh"[taken])
+        entries.append(_entry(*_kind(one, key)))
     return entries
 
 
@@ -128,7 +127,7 @@ def _kind(work: Work, key: str) -> tuple[str, str, dict[str, str]]:
         fields["title"] = f"{{{title}}}"
         if publisher:
             fields["publisher"] = publisher
-    fields["year"] = str(work.year)
+    fields["year"] = "n.d." if work.year is None else str(work.year)  # no date
     if work.doi:
         fields["doi"] = work.doi
     return kind, key, fields
@@ -144,7 +143,7 @@ def _authors(text: str) -> str:
 def _key(work: Work) -> str:
     first = re.split(r"[,;& ]", work.authors)[0]
     plain = unicodedata.normalize("NFKD", first).encode("ascii", "ignore").decode()
-    return re.sub(r"[^A-Za-z]", "", plain) + str(work.year)
+    return re.sub(r"[^A-Za-z]", "", plain) + str(work.year or "nd")
 
 
 def _entry(kind: str, key: str, fields: dict[str, str]) -> str:
@@ -158,5 +157,5 @@ def _escaped(text: str) -> str:
 
 def _table_row(one: TableSource) -> tuple[str, str, str]:
     doi = f", doi:{one.doi}" if one.doi else ""
-    source = f"{one.authors} {one.year}, {one.journal}{doi}"
+    source = f"{one.authors_and_year}, {one.journal}{doi}"
     return f"{one.name}: {one.quantity}", source, f"{one.place}; {one.obtained}"

@@ -26,8 +26,8 @@ class Work(NamedTuple):
     ----------
     authors : str
         Surnames; "et al." where the source names no more.
-    year : int
-        Of publication.
+    year : int or None
+        Of publication; None where unknown.
     place : str
         Journal, volume and first page; or title and publisher of a book.
     use : str
@@ -37,7 +37,7 @@ class Work(NamedTuple):
     """
 
     authors: str
-    year: int
+    year: int | None
     place: str
     use: str
     doi: str = ""
@@ -46,7 +46,8 @@ class Work(NamedTuple):
     def text(self) -> str:
         """One line, as in the docstrings."""
         doi = f", doi:{self.doi}" if self.doi else ""
-        return f"{self.authors} {self.year}, {self.place}{doi}"
+        year = "" if self.year is None else f" {self.year}"
+        return f"{self.authors}{year}, {self.place}{doi}"
 
 
 def works_of(record: object, setup: Setup | None) -> tuple[Work, ...]:
