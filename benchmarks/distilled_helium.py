@@ -4,7 +4,7 @@
 
 For Sobolev lines of He I and for the continuum with feedback: the error of x_e against the full
 network with the same atoms at 1e-7, then the cost of 2000 redshifts from z = 8000 to 20, and error
-(of the largest derivative of x_e by each parameter, against steps for 1e-9) and cost of derivatives. For
+(of the largest derivative by each parameter, against steps for 1e-9) and cost of derivatives. For
 Sobolev lines, whose equations remember nothing, scipy's BDF and LSODA on the same compiled
 right-hand side (BDF with the same compiled Jacobian), at the loosest of the listed tolerances that
 reaches our error. Hydrogen n_max = 30, helium n_max = 10.
