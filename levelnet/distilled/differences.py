@@ -27,8 +27,8 @@ from .prepared import rate_names
 from .table import EffectiveTable
 from .universe import CONSTANTS, make_drive
 
-# Change of the ln of what a parameter moves most, a temperature counted as the 40 of I/kT: the
-# differences then err by its square, and rounding by a part in 1e9.
+# Change of the ln of what a parameter moves most, and how many times less of a temperature, on
+# which equilibria hang by I/kT: halving it moves no derivative by more than 3e-7 of the largest.
 _STEP, _OF_TEMPERATURE = 1e-4, 5.0
 # Spacing in ln a of the differences that give the slopes of d ln H by the parameters.
 _SPACING = 2e-3

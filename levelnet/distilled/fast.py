@@ -45,7 +45,7 @@ ndarray, shape (n_redshift, n_parameters), or None
     Of hydrogen alone they solve the variational equation. With levels of helium they are central
     differences of histories along the same steps, with lines that remember as they then would.
     Errors were measured with `relative` 1e-6 (1e-7), as parts of the largest derivative over
-    redshift: those of x_e and T_m 3e-6 (8e-7), of z_*, r_s and k_D 4e-7 (2e-7), of the fractions of
+    redshift: those of x_e and T_m 4e-6 (8e-7), of z_*, r_s and k_D 4e-7 (2e-7), of the fractions of
     helium by the cosmology 2e-5. Those of the fractions by the rates of hydrogen, below 1e-6, err
     by up to 1e-8, those by H_0, below 1e-12, by 1e-4 of the largest (x_HeIII: 2e-2). The
     differences themselves err by 3e-7 in all but these.

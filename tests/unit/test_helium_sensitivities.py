@@ -35,8 +35,10 @@ TABLES = (("sobolev", "network"), ("continuum", "saha"))
 # Of the largest derivative of a quantity: what the docstring says, from stepping at the default
 # accuracy. Fractions of helium are followed less closely.
 CLOSE, CLOSE_HELIUM = 5e-6, 2e-5
-# Below z = 1000 little He II is left, but some.
-LATE = 5e-5
+# Without the continuum 8 per cent of helium is ionized at z = 1600 and hydrogen remembers its
+# electrons: whole runs at 1e-10 with and without them differ by 9.8e-7 in d x_e/dY at z = 1000,
+# 2e-5 of the largest. With it none is left, and the errors are those of stepping.
+LATE = {"sobolev": 5e-5, "continuum": CLOSE}
 
 
 def values(history: FastHistory) -> dict[str, np.ndarray]:
@@ -132,7 +134,7 @@ def test_late_derivatives_are_the_analytic_ones_of_hydrogen_alone(kind: tuple[st
         exact, found = getattr(alone, part)[:, where], getattr(both, part)
         error = np.max(np.abs(found - exact), axis=0) / np.max(np.abs(exact), axis=0)
         print(kind, part, " ".join(f"{one:.1e}" for one in error))
-        assert np.all(error <= LATE), part
+        assert np.all(error <= LATE[kind[0]]), part
 
 
 def test_same_steps_give_the_same_history_and_others_are_not_rejected() -> None:
