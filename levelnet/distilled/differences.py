@@ -28,7 +28,8 @@ from .table import EffectiveTable
 from .universe import CONSTANTS, make_drive
 
 # Change of the ln of what a parameter moves most, and how many times less of a temperature, on
-# which equilibria hang by I/kT: halving it moves no derivative by more than 3e-7 of the largest.
+# which equilibria hang by I/kT: halving it moves derivatives of x_e, T_m and the observables by up
+# to 3e-7 of the largest.
 _STEP, _OF_TEMPERATURE = 1e-4, 5.0
 # Spacing in ln a of the differences that give the slopes of d ln H by the parameters.
 _SPACING = 2e-3
