@@ -3,7 +3,8 @@
     python -m benchmarks.distilled_helium
 
 For Sobolev lines of He I and for the continuum with feedback: the error of x_e against the full
-network with the same atoms at 1e-7, then the cost of 2000 redshifts from z = 8000 to 20. For
+network with the same atoms at 1e-7, then the cost of 2000 redshifts from z = 8000 to 20, and error
+(of the largest derivative by each parameter, against steps for 1e-9) and cost of derivatives. For
 Sobolev lines, whose equations remember nothing, scipy's BDF and LSODA on the same compiled
 right-hand side (BDF with the same compiled Jacobian), at the loosest of the listed tolerances that
 reaches our error. Hydrogen n_max = 30, helium n_max = 10.
@@ -13,6 +14,7 @@ from __future__ import annotations
 
 import dataclasses
 import math
+from collections.abc import Callable
 
 from benchmarks.timing import best_of, machine  # pins threads
 
@@ -101,8 +103,23 @@ def main() -> None:
         hydrogen = dataclasses.replace(setup.lines, helium=None, helium_continuum=None)
         times = best_of([ours, lambda b=bare, h=hydrogen: ours(b, lines=h)], 20)
         print(f"  {1e3 * times[0]:.2f} ms, {times[0] / times[1]:.1f} times hydrogen alone")
+        derivatives(ours)
         if name == "sobolev":
             rivals(table, plain, times[0])
+
+
+def derivatives(ours: Callable[..., FastHistory]) -> None:
+    """Print error and cost of derivatives."""
+    found, exact = (ours(sensitivities=True, relative=one).sensitivities for one in (1e-6, 1e-9))
+    assert found is not None and exact is not None
+    for part in ("free_electron_fraction", "matter_temperature_k"):
+        there = getattr(exact, part)
+        error = np.abs(getattr(found, part) - there).max(axis=0) / np.abs(there).max(axis=0)
+        worst = found.parameters[int(np.argmax(error))]
+        print(f"  derivatives of {part}: error {error.max():.1e} (by {worst})")
+    times = best_of([ours, lambda: ours(sensitivities=True)], 10)
+    n = len(found.parameters)
+    print(f"  by {n} parameters: {times[1] / times[0]:.0f} times one history")
 
 
 def rivals(table: EffectiveTable, plain: FastHistory, seconds: float) -> None:

@@ -2,7 +2,7 @@
 
 Definitions, limits and sources: :mod:`levelnet.background.last_scattering`. tau starts at the
 lowest redshift asked for. The history starts at the hottest T_r of the table, where the neutral
-fraction is below 1e-8; helium is neutral throughout.
+fraction is below 1e-8; helium is neutral throughout unless the table holds its levels.
 """
 
 from __future__ import annotations
@@ -18,6 +18,9 @@ from ..background.last_scattering import observe
 from ..background.parameters import COSMOLOGICAL
 from ..background.quadrature import Quadrature, quadrature
 from ..kernels.effective import DRIVE_COMPTON, Atom
+
+# Relative change of n_e/n_H before the history whose effect is a derivative.
+_EARLY = 1e-3
 
 
 @dataclass(frozen=True, slots=True)
@@ -56,6 +59,44 @@ def observe_electrons(
     names = tuple(Observables.__slots__)
     seen = observe(cosmology, grid, electrons, thomson, names=names, early_electron_fraction=early)
     return Observables(*seen.value.tolist())
+
+
+def electron_slopes(
+    cosmology: Cosmology,
+    grid: Quadrature,
+    electrons: FloatArray,
+    by: FloatArray,
+    early: tuple[float, FloatArray],
+    thomson: float,
+) -> FloatArray:
+    """Derivatives of z_*, r_s and k_D by the parameters, shape (3, n_parameters).
+
+    Parameters
+    ----------
+    cosmology : Cosmology
+        The background.
+    grid : Quadrature
+        Where the history is known.
+    electrons : ndarray, shape (n_points,), dimensionless
+        n_e/n_H there.
+    by : ndarray, shape (n_points, n_parameters)
+        Its derivatives; the first parameters are those of a cosmology.
+    early : float and ndarray, shape (n_parameters,)
+        n_e/n_H before the grid, and its derivatives.
+    thomson : float
+        Thomson cross section over the measured one.
+    """
+    names = tuple(Observables.__slots__)
+    seen = observe(cosmology, grid, electrons, thomson, (), names, early[0])
+    slopes = seen.gradient @ (by / electrons[:, None])
+    slopes[:, : len(COSMOLOGICAL)] += seen.by_parameter
+    # k_D alone hangs on what is before the grid, and smoothly.
+    more, less = (
+        observe(cosmology, grid, electrons, thomson, (), names, early[0] * (1.0 + change)).value
+        for change in (_EARLY, -_EARLY)
+    )
+    slopes += np.outer((more - less) / (2.0 * _EARLY * early[0]), early[1])
+    return slopes
 
 
 def observe_run(

@@ -21,7 +21,7 @@ from ..history.helium import COLDEST_K, EBB, FADING, GONE, PULL
 from ..kernels.effective import Atom
 from ..kernels.effective_helium import HeliumLines
 from ..kernels.effective_plasma import Plasma
-from ..kernels.plasma_steps import OUTSIDE_ESCAPE, plasma_history
+from ..kernels.plasma_steps import OUTSIDE_ESCAPE, Steps, plasma_history
 from .fast import FastHelium, fractions
 from .helium_escape import LineTable
 from .stage import StageTable, stage_atom
@@ -40,11 +40,17 @@ _START, _LARGEST_LAG = 0.1, 0.03
 
 
 class PlasmaRun:
-    """What the kernel gave: states (u, v, a, b) at outputs and at the points of the observables."""
+    """What the kernel gave: states (u, v, a, b) at outputs and at the points of the observables.
 
-    def __init__(self, outputs: int, points: int) -> None:
+    `steps` are those it took through `plasma`.
+    """
+
+    def __init__(self, plasma: Plasma, outputs: int, points: int) -> None:
+        self.plasma = plasma
         self.state, self.grid_state = np.empty((outputs, 4)), np.empty((points, 4))
         self.report, self.status = np.zeros(6), 0
+        room = _MAX_STEPS + 1
+        self.steps = Steps(np.empty(room), np.empty((room, 3), dtype=np.int64), 0)
 
 
 def run_plasma(
@@ -84,7 +90,7 @@ def run_plasma(
     low = min(hottest, float(s[0]), float(hydrogen_top(hydrogen, cosmology)))
     plasma = plasma_of(table, hydrogen, cosmology, low - 1e-3, float(s[-1]))
     points = np.empty(0) if grid is None else grid.points
-    run = PlasmaRun(len(s), len(points))
+    run = PlasmaRun(plasma, len(s), len(points))
     assert table.helium_lines is not None
     run.status = plasma_history(
         plasma,
@@ -98,8 +104,10 @@ def run_plasma(
         run.state,
         run.grid_state,
         run.report,
-        _MAX_STEPS,
+        run.steps,
     )
+    taken = int(run.report[2]) + 1
+    run.steps = Steps(run.steps.time[:taken], run.steps.mode[:taken], 1)
     if run.report[1] > _LARGEST_LAG:
         raise InputError(
             f"table: it ends at T_r = {top_k:.0f} K, where helium is not in Saha equilibrium; "

@@ -1,6 +1,7 @@
 """A history of hydrogen and helium from tables, compiled: its start and its steps."""
 
 import math
+from typing import NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
@@ -27,6 +28,7 @@ from .effective import (
 )
 from .effective_helium import (
     Memory,
+    Place,
     add_logs,
     remember,
 )
@@ -47,9 +49,21 @@ from .effective_plasma import (
 )
 
 FloatArray = NDArray[np.float64]
+IntArray = NDArray[np.int64]
 
 # A status besides those of hydrogen: line depths outside the table of escape probabilities.
 OUTSIDE_ESCAPE = 5
+
+
+class Steps(NamedTuple):
+    """Accepted steps: time (n,), and mode (n, 3) by which each ion is followed from there.
+
+    given: 0 where a run is to choose them, 1 where it is to take them.
+    """
+
+    time: FloatArray
+    mode: IntArray
+    given: int
 
 
 @kernel
@@ -195,6 +209,41 @@ def _slack(log_odds: float, most: float) -> float:
     return min(most, max(1.0, math.sqrt(0.01 / least))) if least > 1e-30 else most
 
 
+@inlined
+def _open_step(
+    plasma: Plasma,
+    now: float,
+    point: FloatArray,
+    steps: Steps,
+    number: int,
+    memory: Memory,
+    desk: Desk,
+) -> Place:
+    """Slopes where a step starts, remembered by lines.
+
+    How each ion is followed is chosen and put into `steps`, or, where given, taken from there.
+    """
+    desk.lines.outside[0] = 0
+    for ion in (OF_HYDROGEN, OF_FIRST):
+        if desk.mode[ion] == SAHA:  # only for one step
+            desk.mode[ion] = NETWORK
+    place = evaluate(plasma, now, point, memory, desk, SLOPES)
+    if place.radiation_k > plasma.limits[COLDEST_K] and desk.mode[OF_FIRST] == NETWORK:
+        _, neutral = split_odds(point[2])
+        remember(plasma.first, plasma.lines, place, neutral, memory, desk.first, desk.lines)
+    changed, mode = False, steps.mode[number]
+    if steps.given > 0:
+        for ion in range(3):
+            changed = changed or desk.mode[ion] != mode[ion]
+            desk.mode[ion] = mode[ion]
+    else:
+        changed = choose_modes(plasma, place, point, desk)
+        mode[:] = desk.mode
+    if changed:
+        place = evaluate(plasma, now, point, memory, desk, SLOPES)
+    return place
+
+
 @kernel
 def _integrate(
     plasma: Plasma,
@@ -203,29 +252,23 @@ def _integrate(
     longest: float,
     first_step: float,
     memory: Memory,
-    times: FloatArray,
+    steps: Steps,
     states: FloatArray,
     desk: Desk,
 ) -> tuple[int, int, int]:
-    """Steps from times[0] to `end`; gives the status, the number of points and of rejections."""
+    """Steps from the first of `steps` to `end`; gives status, number of points and of rejections.
+
+    Steps given are those of a run before, which had what the tables hold; none is rejected.
+    """
     plasma, memory, desk = borrowed(plasma), borrowed(memory), borrowed(desk)
     stages, inverse, slack = np.zeros((9, 4)), np.zeros((4, 4)), np.ones(4)
     point = states[0].copy()
-    now, h = times[0], first_step
+    now, h = steps.time[0], first_step
     count, rejected = 1, 0
     while now < end:
-        desk.lines.outside[0] = 0
-        for ion in (OF_HYDROGEN, OF_FIRST):
-            if desk.mode[ion] == SAHA:  # only for one step
-                desk.mode[ion] = NETWORK
-        place = evaluate(plasma, now, point, memory, desk, SLOPES)
-        if desk.lines.outside[0] != 0:
+        place = _open_step(plasma, now, point, steps, count - 1, memory, desk)
+        if desk.lines.outside[0] != 0 and steps.given == 0:
             return OUTSIDE_ESCAPE, count, rejected
-        if place.radiation_k > plasma.limits[COLDEST_K] and desk.mode[OF_FIRST] == NETWORK:
-            _, neutral = split_odds(point[2])
-            remember(plasma.first, plasma.lines, place, neutral, memory, desk.first, desk.lines)
-        if choose_modes(plasma, place, point, desk):
-            place = evaluate(plasma, now, point, memory, desk, SLOPES)
         # Only while lines light each other.
         limited = desk.mode[OF_FIRST] == NETWORK and place.radiation_k > plasma.limits[COLDEST_K]
         stages[6, :] = desk.rate
@@ -233,31 +276,32 @@ def _integrate(
         slack[2] = _slack(point[2], 4.0)
         slack[3] = 1e6 if desk.mode[OF_SECOND] == SAHA else _slack(point[3], 15.0)
         while True:
-            if count + rejected >= times.shape[0]:
+            if count + rejected >= steps.time.shape[0]:
                 return TOO_MANY_STEPS, count, rejected
             pieces = max(1.0, math.ceil((end - now) / h - 0.1))
             if limited:
                 pieces = max(pieces, math.ceil((end - now) / longest))
-            trial = (end - now) / pieces
+            trial = (end - now) / pieces if steps.given == 0 else steps.time[count] - now
             _step(plasma, now, trial, point, stages, inverse, memory, desk)
             size = 0.0
             for i in range(4):
                 part = abs(stages[8, i]) / (tolerance[i] * slack[i])
                 size = max(size, part) if part < 1e300 else 1e300
             factor = min(GROW, max(SHRINK, SAFETY * max(size, 1e-12) ** -0.25))
-            if size <= 1.0:
+            if size <= 1.0 or (steps.given > 0 and size < 1e300):
                 break
             rejected += 1
             h = trial * factor
-            if h < 1e-13 * max(1.0, abs(now)):
+            if steps.given > 0 or h < 1e-13 * max(1.0, abs(now)):
                 return STEP_TOO_SMALL, count, rejected
         point[:] = stages[7]
         narrow = plasma.first if place.radiation_k > plasma.limits[COLDEST_K] else plasma.hydrogen
         if not narrow.span[2] <= point[1] <= narrow.span[3]:
             return OUT_OF_RANGE, count, rejected
         h = trial * factor if pieces > 1.0 or factor < 1.0 else max(h, trial * factor)
-        now = end if pieces == 1.0 else now + trial
-        times[count] = now
+        if steps.given == 0:
+            steps.time[count] = end if pieces == 1.0 else now + trial
+        now = steps.time[count]
         states[count, :] = point
         count += 1
     return DONE, count, rejected
@@ -293,7 +337,7 @@ def plasma_history(
     states: FloatArray,
     grid_states: FloatArray,
     report: FloatArray,
-    max_steps: int,
+    steps: Steps,
 ) -> int:
     """Integrate one history down to the last of `outputs`.
 
@@ -301,11 +345,11 @@ def plasma_history(
     to `states` and `grid_states` (n, 4). range_k (2,): T_r between which the start is looked for;
     tolerance (4,): local errors; longest: no step with helium is longer. `report` (6,) receives s
     of the start, the lag there, the numbers of accepted and rejected steps, the last s reached, and
-    v there. Gives a status.
+    v there; `steps` the steps, as many as it has room for. Gives a status.
     """
-    desk = make_desk(plasma)
-    memory = make_memory(max_steps + 1, plasma.lines.upper.shape[0])
-    times, points = np.empty(max_steps + 1), np.empty((max_steps + 1, 4))
+    desk, times = make_desk(plasma), steps.time
+    memory = make_memory(times.shape[0], plasma.lines.upper.shape[0])
+    points = np.empty((times.shape[0], 4))
     start = find_start(plasma, range_k[0], range_k[1], start_tolerance, memory, desk)
     report[0], report[1] = start, lagging_state(plasma, start, memory, desk, points[0])
     above = _above(plasma, outputs, start, memory, desk, states)
@@ -314,7 +358,7 @@ def plasma_history(
     status, count, rejected = DONE, 1, 0
     if above < outputs.shape[0]:
         status, count, rejected = _integrate(
-            plasma, outputs[-1], tolerance, longest, first_step, memory, times, points, desk
+            plasma, outputs[-1], tolerance, longest, first_step, memory, steps, points, desk
         )
     report[2], report[3], report[4] = count - 1, rejected, times[count - 1]
     report[5] = points[count - 1, 1]
@@ -322,4 +366,35 @@ def plasma_history(
         return status
     interpolate(times[:count], points[:count], outputs, above, states)
     interpolate(times[:count], points[:count], grid, grid_above, grid_states)
+    return status
+
+
+@kernel
+def repeated_history(
+    plasma: Plasma,
+    outputs: FloatArray,
+    grid: FloatArray,
+    steps: Steps,
+    states: FloatArray,
+    grid_states: FloatArray,
+) -> int:
+    """Integrate once more along the steps of a run, which had perhaps another plasma.
+
+    The start, the steps and how each ion is followed are given, so that the result is a smooth
+    function of the plasma. Arguments as those of :func:`plasma_history`; `steps` hold no more than
+    the run took. Gives a status.
+    """
+    desk, times = make_desk(plasma), steps.time
+    count = times.shape[0]
+    memory = make_memory(count, plasma.lines.upper.shape[0])
+    points, none = np.empty((count, 4)), np.ones(4)
+    _ = lagging_state(plasma, times[0], memory, desk, points[0])
+    above = _above(plasma, outputs, times[0], memory, desk, states)
+    grid_above = _above(plasma, grid, times[0], memory, desk, grid_states)
+    if count == 1:
+        return DONE
+    status, _, _ = _integrate(plasma, times[-1], none, 1.0, 1.0, memory, steps, points, desk)
+    if status == DONE:
+        interpolate(times, points, outputs, above, states)
+        interpolate(times, points, grid, grid_above, grid_states)
     return status

@@ -291,7 +291,6 @@ def test_pieces_are_used_and_foreign_ones_are_not(monkeypatch: pytest.MonkeyPatc
     ("change", "options", "said"),
     [
         ({"helium_mass_fraction": 0.6}, {}, "helium_mass_fraction = 0.6: .* from 0.1 to 0.4"),
-        ({}, {"sensitivities": True}, "sensitivities: not known"),
         ({}, {"fine_structure_change": 0.01}, "fine_structure_change"),
         ({}, {"redshifts": [12000.0]}, "outside the table"),
     ],
