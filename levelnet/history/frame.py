@@ -23,13 +23,15 @@ from ..numerics.stepping import Linearize, Rate, Slopes, Trajectory
 from .equations import SlowEquations
 
 # T_r in K, in units of the atom's energies, down to which x_HII/x_HI, x_HeII/x_HeI and
-# x_HeIII/x_HeII are followed by the origin. The last is near equilibrium to the end of helium.
+# x_HeIII/x_HeII are followed by the origin: where each leaves equilibrium by about a percent; the
+# last stays near it to the end of helium. Chosen by counting steps: 1000 K more or less of the
+# first two is worth 1 per cent of them.
 _LEAVES_K = 5000.0, 7500.0, 1500.0
 
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Frame:
-    """Where the variables are measured from.
+    """Where the variables are measured from; n is 2, with helium 4.
 
     Attributes
     ----------

@@ -44,6 +44,21 @@ _CHECKS = (0.0071, 0.0413, 0.1237, 0.2719, 0.4873, 0.7331, 0.9717)
 _MOST_NODES = 200
 
 
+class SpinLines(NamedTuple):
+    """Lines between the eliminated levels of one spin, as a coupling buffer of their blocks.
+
+    Attributes
+    ----------
+    strength_per_s : ndarray, shape (n_couplings,), s^-1
+        Strengths from l (rows) to l + 1, block after block; 0 where there is no line.
+    gap_ev : ndarray, shape (n_couplings,), eV
+        Their energies; 1 where there is no line.
+    """
+
+    strength_per_s: FloatArray
+    gap_ev: FloatArray
+
+
 @dataclass(frozen=True, slots=True, eq=False)
 class HeliumLadders:
     """He I with the split into kept levels and interior.
@@ -58,6 +73,8 @@ class HeliumLadders:
         Where they stand in `levels`.
     interior : tuple of two Interior
         Singlets and triplets; `position` counts in `levels`.
+    between : tuple of two SpinLines
+        Lines between their eliminated levels.
     """
 
     levels: HeliumLevels
@@ -66,6 +83,7 @@ class HeliumLadders:
     kept: KeptLevels
     kept_position: IntArray
     interior: tuple[Interior, Interior]
+    between: tuple[SpinLines, SpinLines]
 
 
 class KeptLines(NamedTuple):
@@ -119,7 +137,33 @@ def helium_ladders(
     for spin, shift in ((0, 0), (1, first_triplet - 1)):
         own = {(n, l) for n, l, s in kept if s == spin}
         sides.append(interior_of(n_max, np.zeros(0, dtype=np.int64), own, shift))
-    return HeliumLadders(levels, lines, continuum, chosen, position, (sides[0], sides[1]))
+    between = [_spin_lines(levels, lines, side, spin) for spin, side in enumerate(sides)]
+    return HeliumLadders(
+        levels,
+        lines,
+        continuum,
+        chosen,
+        position,
+        (sides[0], sides[1]),
+        (between[0], between[1]),
+    )
+
+
+def _spin_lines(levels: HeliumLevels, lines: HeliumLines, inside: Interior, spin: int) -> SpinLines:
+    shape, where = inside.shape, inside.position
+    strengths, gaps = np.zeros((2, shape.n_couplings))
+    for l in range(len(shape.size) - 1):
+        rows, columns = shape.slice(l), shape.slice(l + 1)
+        own, other = where[rows], where[columns]
+        gap = np.abs(levels.energy_ev[own][:, None] - levels.energy_ev[other])
+        strength = lines.block(spin, l)[np.ix_(levels.n[own] - l - 1, levels.n[other] - l - 2)]
+        # Levels of one n and high l may have one energy: no photon goes between them.
+        line = (strength > 0.0) & (gap > 0.0) & ~inside.idle[rows, None] & ~inside.idle[columns]
+        shape.coupling(strengths, l)[...] = np.where(line, strength, 0.0)
+        shape.coupling(gaps, l)[...] = np.where(line, gap, 1.0)
+    for one in (strengths, gaps):
+        one.setflags(write=False)
+    return SpinLines(strengths, gaps)
 
 
 def _order(levels: HeliumLevels, index: int) -> float:
@@ -201,7 +245,7 @@ def factor_spin(ladders: HeliumLadders, spin: int, kt_ev: float, sink: FloatArra
     statistical = levels.statistical_weight[inside.position]
     log_weight = np.log(statistical) - (energy - energy.min()) / kt_ev
     root = np.exp(0.5 * log_weight)
-    strength, gap_ev = _couplings(ladders, spin)
+    strength, gap_ev = ladders.between[spin]
     coupling = strength / (2.0 * np.sinh(0.5 / kt_ev * gap_ev))
     between = [
         (shape.slice(l), shape.slice(l + 1), shape.coupling(coupling, l))
@@ -219,28 +263,6 @@ def factor_spin(ladders: HeliumLadders, spin: int, kt_ev: float, sink: FloatArra
         sent[columns] = weight[rows] @ mean
     solver = factor_symmetric(shape, coupling, weight, sent, sink * root / scale)
     return SpinInterior(solver, root * root, scale)
-
-
-@functools.lru_cache(maxsize=4)
-def _couplings(ladders: HeliumLadders, spin: int) -> tuple[FloatArray, FloatArray]:
-    """Strengths (s^-1) and energies (eV, 1 where there is no line) of the lines of one spin.
-
-    Between eliminated levels: block after block, each from l (rows) to l + 1.
-    """
-    inside, levels = ladders.interior[spin], ladders.levels
-    shape, where = inside.shape, inside.position
-    strengths, gaps = np.zeros((2, shape.n_couplings))
-    for l in range(len(shape.size) - 1):
-        rows, columns = shape.slice(l), shape.slice(l + 1)
-        own, other = where[rows], where[columns]
-        block = ladders.lines.block(spin, l)
-        strength = block[np.ix_(levels.n[own] - l - 1, levels.n[other] - l - 2)].copy()
-        strength[inside.idle[rows]] = 0.0
-        strength[:, inside.idle[columns]] = 0.0
-        gap = np.abs(levels.energy_ev[own][:, None] - levels.energy_ev[other])
-        shape.coupling(strengths, l)[...] = strength
-        shape.coupling(gaps, l)[...] = np.where(strength > 0.0, gap, 1.0)
-    return strengths, gaps
 
 
 class Reduction(NamedTuple):

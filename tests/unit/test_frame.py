@@ -90,3 +90,16 @@ def test_a_history_is_the_same_from_zero_and_takes_more_steps(
     ]
     np.testing.assert_allclose(framed.free_electron_fraction[2:], fraction, rtol=3e-8)
     assert len(plain.trajectory.time) > 1.15 * framed.diagnostics.steps
+
+
+@pytest.mark.parametrize("gap", [0.0, 1e-14, 1e-12, 1e-8, 1e-5])
+def test_outputs_beside_a_bend_leave_no_sliver(gap: float) -> None:
+    # A step of 1e-14 had spoilt what lines remember, and the run with feedback ended early.
+    setup = helium_setup(3, lines={"helium": "sobolev_feedback"})
+    bend = frame_of(helium_equations()[0]).breaks(START, 0.0)[1]
+    beside = math.expm1(-bend - gap)
+    grid = replace(setup.grid, redshifts=(2500.0, 2000.0, beside, 1700.0, 500.0))
+    found = integrate.integrate_history(replace(setup, grid=grid), lambda *_: None)
+    assert found.trajectory.outcome.ok
+    assert len(found.trajectory.time) < 900
+    assert np.min(np.diff(found.trajectory.time)) > 5e-6

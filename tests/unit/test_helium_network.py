@@ -190,6 +190,28 @@ def test_departures_with_many_levels(temperature_k: float, higher: HigherLines, 
     assert levels.conservation_error < 1e-12
 
 
+@pytest.mark.parametrize("temperature_k", [60.0, 3000.0])
+def test_levels_of_one_energy_have_no_line(temperature_k: float) -> None:
+    # From n = 60 up, neighbours in l of high l have the same energy in doubles.
+    ladders = ladders_of(62, "closed")
+    for (strength, gap_ev), inside in zip(ladders.between, ladders.interior, strict=True):
+        assert len(strength) == inside.shape.n_couplings
+        assert np.all(gap_ev > 0.0)
+    value = reduce_helium(ladders, temperature_k)
+    assert np.isfinite(value).all()
+    rates = assemble_rates(
+        helium_rate_constants(ladders), value, np.zeros_like(value), temperature_k, temperature_k
+    )
+    fewer = ladders_of(30, "closed")
+    there = reduce_helium(fewer, temperature_k)
+    known = assemble_rates(
+        helium_rate_constants(fewer), there, np.zeros_like(there), temperature_k, temperature_k
+    )
+    # More shells recombine faster (Grin & Hirata 2010, for hydrogen), 3 to 25 per cent here.
+    gain = rates.recombination / known.recombination
+    assert np.all((gain > 1.0) & (gain < 1.4))
+
+
 def ion_with(n_max: int) -> tuple[Ladder, HeliumIon]:
     """He II with this many levels, reduced where it is asked; its lines are those of small runs."""
     _, atoms = helium_equations()
