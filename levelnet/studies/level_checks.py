@@ -18,8 +18,8 @@ LARGE = 0.2
 """Error bar over correction above which a limit is called poorly known."""
 
 FAR_BELOW = 1e-3
-"""A correction that, bar included, is below this part of the largest in the range, or of the error
-that was asked, tells nothing of how well a limit is known."""
+"""A correction that, bar included, is below this part of the error that was asked, or of the largest
+in the range where none was, tells nothing of how well a limit is known."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -38,7 +38,7 @@ class LimitCheck:
     n_without_law, n_redshift : int
         Redshifts in the range that no law was fitted at, which are left out; and all of them.
     least : float, dimensionless
-        `FAR_BELOW` of the largest correction with its bar, or of the error asked if that is larger.
+        `FAR_BELOW` of the error asked, or of the largest correction with its bar if none was.
     n_far_below : int
         Redshifts with a law at which correction and bar are below `least` of x_e, left out too.
     """
@@ -126,8 +126,7 @@ def _told(
 ) -> tuple[float, BoolArray]:
     """What is far below, and where a law is fitted to more than that."""
     whole = np.where(law, correction + bar, 0.0)
-    asked = 0.0 if study.question is None else study.question.within
-    least = FAR_BELOW * max(float(whole.max()), asked)
+    least = FAR_BELOW * (study.question.within if study.question else float(whole.max()))
     return least, law & (whole >= least)
 
 

@@ -369,7 +369,7 @@ def test_corrections_far_below_what_is_asked_are_left_out_of_the_figure() -> Non
     asked = (redshift >= 200.0) & (redshift <= 1600.0)
     for within, least, share, far in (
         (None, 1.1e-6, 0.2, asked & early),
-        (1e-3, 1.1e-6, 0.2, asked & early),  # a thousandth of the correction is more
+        (1e-3, 1e-6, 0.2, asked & early),
         (0.2, 2e-4, 0.1, asked & (early | middle)),
         (1.0, 1e-3, 0.1, asked & (early | middle)),
     ):
