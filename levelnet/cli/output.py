@@ -251,6 +251,8 @@ def _share_lines(history: History) -> list[str]:
     ranked = sorted(
         zip(channels.names, channels.cumulative_share[-1], strict=True), key=lambda one: -one[1]
     )
+    if math.isnan(ranked[0][1]):
+        return [row("recombined through", "nothing yet: hydrogen is in Saha equilibrium")]
     shown = [f"{name} {100.0 * share:.3f} %" for name, share in ranked[:_CHANNELS_SHOWN]]
     rest = ranked[_CHANNELS_SHOWN:]
     if rest:

@@ -64,9 +64,12 @@ class Channels:
     net_rate_per_s : ndarray, shape (n_redshift, n_channels), s^-1
         Net transitions to the ground state per hydrogen nucleus.
     share : ndarray, shape (n_redshift, n_channels), dimensionless
-        Each channel's part of the net rate at that redshift; sums to 1.
+        Each channel's part of the net rate at that redshift; sums to 1. NaN while hydrogen is in
+        Saha equilibrium (its lag below a tenth of the relative accuracy), where the net rate is
+        zero within rounding.
     cumulative_share : ndarray, shape (n_redshift, n_channels), dimensionless
         Each channel's part of all net recombinations since the start of the integration; sums to 1.
+        NaN likewise.
     """
 
     names: tuple[str, ...]

@@ -123,9 +123,9 @@ def _channels(history: History) -> Table:
     channels = history.channels
     shares = channels.cumulative_share[-1]
     order = np.argsort(-np.abs(shares), kind="stable").tolist()
-    rows = [(channels.names[k], f"{100.0 * shares[k]:.4f}") for k in order[:_CHANNELS]]
+    rows = [(channels.names[k], number(100.0 * shares[k], ".4f")) for k in order[:_CHANNELS]]
     if rest := order[_CHANNELS:]:
-        rows.append((f"{len(rest)} more", f"{100.0 * shares[rest].sum():.4f}"))
+        rows.append((f"{len(rest)} more", number(100.0 * shares[rest].sum(), ".4f")))
     caption = f"How atoms reached the ground state, all down to z = {history.redshift[-1]:g}"
     return Table(caption, ("channel", "share (%)"), tuple(rows))
 
