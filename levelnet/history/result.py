@@ -38,7 +38,8 @@ class SpeciesPopulations:
     log_departure : ndarray, shape (n_redshift, n_levels), dimensionless
         Natural logarithm of the departure coefficient b = x / x_Saha, with x_Saha the
         Saha-Boltzmann population at T_m with the actual n_e and n_ion. NaN where helium is held as
-        it is (T_r below 1400 K), and only there; excited levels then have population 0.
+        it is (T_r below 1400 K), and only there, for the ground state too, since the ions are no
+        longer followed; excited levels then have population 0.
     """
 
     name: str

@@ -18,8 +18,8 @@ LARGE = 0.2
 """Error bar over correction above which a limit is called poorly known."""
 
 FAR_BELOW = 1e-3
-"""A correction that, bar included, is below this part of the error asked (of the largest in the range
-where none was) tells nothing of how well a limit is known."""
+"""A correction that, bar included, is below this part of the error asked (where none was, of the
+largest in the range) tells nothing of how well a limit is known."""
 
 
 @dataclass(frozen=True, slots=True)

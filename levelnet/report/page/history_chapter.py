@@ -7,6 +7,7 @@ import math
 import numpy as np
 
 from ...constants import SECONDS_PER_YEAR
+from ...history.helium_through import through_text
 from ...history.result import History
 from ...history.samples import sample_rows
 from ..figures import figure_makers
@@ -84,7 +85,10 @@ def _answer(history: History) -> str:
 def _found(history: History) -> tuple[Block, ...]:
     marks = history.milestones
     years = SECONDS_PER_YEAR
-    helium = (("helium is half neutral", number(half_neutral(history), ".1f")),)
+    helium = (
+        ("helium is half neutral", number(half_neutral(history), ".1f")),
+        ("He II recombined through", through_text(history) or "not known from these outputs"),
+    )
     events = Facts(
         (
             *(helium if history.helium is not None else ()),
