@@ -307,7 +307,7 @@ def test_pieces_are_used_and_foreign_ones_are_not(monkeypatch: pytest.MonkeyPatc
 @pytest.mark.parametrize(
     ("change", "options", "said"),
     [
-        ({"helium_mass_fraction": 0.6}, {}, "helium_mass_fraction = 0.6: .* from 0.1 to 0.4"),
+        ({"helium_mass_fraction": 0.7}, {}, "helium_mass_fraction = 0.7: .* from 0.02 to 0.6"),
         ({}, {"sensitivities": True}, "sensitivities: not known"),
         ({}, {"fine_structure_change": 0.01}, "fine_structure_change"),
         ({}, {"redshifts": [12000.0]}, "outside the table"),

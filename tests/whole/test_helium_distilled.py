@@ -144,6 +144,6 @@ def test_commands(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
     assert main(["history", str(table), "--setup", str(other)]) == 2
     assert "helium.n_max = 4, but the table" in capsys.readouterr().err
     assert main(["history", str(table), "--helium-mass-fraction", "0.7"]) == 2
-    assert "checked from 0.1 to 0.4" in capsys.readouterr().err
+    assert "checked from 0.02 to 0.6" in capsys.readouterr().err
     assert main(["show", str(table), "--export", "csv"]) == 2
     assert "knows hydrogen alone" in capsys.readouterr().err
