@@ -65,7 +65,7 @@ def helium_left_out(lines: Lines) -> tuple[str, ...]:
     notes = [f"helium lines assume: {text}" for text in chosen.assumes]
     notes += [f"helium lines hold for: {text}" for text in chosen.holds_for]
     if chosen.leaves_out:
-        notes.append(f"helium lines leave out: {chosen.leaves_out}")
+        notes.append(f"helium lines: {chosen.leaves_out}")
     if not lines.helium_fed:
         notes.append(f"helium lines leave out: {_NOT_FED}")
     return tuple(notes)

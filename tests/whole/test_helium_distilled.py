@@ -48,7 +48,7 @@ def compare(full: History, fast: object, electrons: float) -> None:
     ("lines", "ion", "universe"),
     [
         ("sobolev_feedback", "network", {}),
-        ("sobolev", "saha", {"baryon_density_h2": 0.05, "helium_mass_fraction": 0.35}),
+        ("sobolev", "saha", {"baryon_density_h2": 0.05, "helium_mass_fraction": 0.6}),
     ],
 )
 def test_small_atoms(lines: str, ion: str, universe: dict[str, float]) -> None:
