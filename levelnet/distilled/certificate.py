@@ -42,7 +42,7 @@ _REDSHIFTS = 80
 # full history takes a minute at that, nearly so.
 _STEPPING, _STEPPING_HELIUM = 1e-8, 1e-7
 
-# Invented: little baryonic matter in a fast, warm universe, and much of it in a slow, cool one; with
+# Invented: little baryonic matter in a fast, warm universe, and much of it in a slow, cool one;
 # little helium in the first and much in the second, as far as fits of its abundance go.
 FAR_COSMOLOGIES = (
     Cosmology(
