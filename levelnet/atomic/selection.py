@@ -269,14 +269,14 @@ def _what(selector: Selector, atom: AtomSize) -> str:
     """What was searched, for messages."""
     helium = atom.helium
     if selector.process == "absorption":
-        return 'these lines; it acts with lines.helium = "continuum"'
+        return 'these lines; it acts where helium recombines and lines.helium = "continuum"'
     if selector.species == "H I":
         return (
             f"hydrogen with n_max = {atom.n_max}, resolve_l_to = {atom.resolve_l_to} and "
             f"lyman_lines = {atom.lyman_lines}"
         )
     if not helium.n_max:
-        return "helium, which is inert with helium.n_max = 0"
+        return "helium, which is inert with helium.n_max = 0 or a helium fraction of 0"
     if selector.species == "He II":
         return (
             f"He II with helium.n_max = {helium.n_max}"

@@ -41,6 +41,7 @@ def helium_values(history: History, rows: list[int] | IntArray) -> dict[str, Any
     """Fractions at some outputs and how it went, under the names of the fields; None: inert."""
     if history.helium is None:
         return None
+    from ..history.helium_through import recombined_through
     from ..history.samples import helium_rows
 
     found: dict[str, Any] = {"n_max": history.setup.helium.n_max}
@@ -52,6 +53,7 @@ def helium_values(history: History, rows: list[int] | IntArray) -> dict[str, Any
         name: {figure: getattr(lines, figure)[rows, k] for figure in figures}
         for k, name in enumerate(lines.names)
     }
+    found["recombined_through"] = recombined_through(history)
     return found | {"line_redshift": history.redshift[rows], "line_figures": figures_of_lines}
 
 

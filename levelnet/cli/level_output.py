@@ -215,7 +215,11 @@ def _check_lines(study: LevelStudy) -> list[str]:
             f"x_e of n_max = {n}, foreseen from rungs up to {shorter}: off by at most "
             f"{miss:.2f} of its error bar at every z"
             + ("" if miss <= 1.0 else ", OUTSIDE THE BAR")
-            + f"; the bar is at most {100.0 * bar:.0f} % of the correction",
+            + (
+                ""
+                if math.isnan(bar)
+                else f"; the bar is at most {100.0 * bar:.0f} % of the correction"
+            ),
         )
         for n, miss, bar in zip(
             held.n_max.tolist(),
@@ -228,6 +232,11 @@ def _check_lines(study: LevelStudy) -> list[str]:
     return [*lines, row("limit", _limit_text(study))]
 
 
+def _bar_text(bar: float) -> str:
+    """Bar over correction; nothing where no correction is large enough to tell."""
+    return "" if math.isnan(bar) else f"; the bar is at most {100.0 * bar:.0f} % of the correction"
+
+
 def _limit_text(study: LevelStudy) -> str:
     """Say how well the limit of x_e is known."""
     from ..studies.level_checks import LARGE, check_limit
@@ -235,9 +244,19 @@ def _limit_text(study: LevelStudy) -> str:
     found = check_limit(study)
     place = f"{found.low:g} <= z <= {found.high:g}"
     counts = f"{found.n_without_law} of {found.n_redshift} redshifts"
-    if math.isnan(found.bar_over_correction):
+    if found.n_without_law == found.n_redshift:
         return f"no law is fitted at any of the {found.n_redshift} redshifts in {place}"
     left_out = f"; {counts}, without a law, left out" if found.n_without_law else ""
+    if found.n_far_below:
+        left_out += (
+            f"; {found.n_far_below}, where correction and bar are below {found.least:.0e} of x_e, "
+            "left out"
+        )
+    if math.isnan(found.bar_over_correction):
+        return (
+            f"correction and error bar are below {found.least:.0e} of x_e wherever a law is "
+            f"fitted, far below what is asked ({place})"
+        )
     text = (
         f"its error bar is at most {100.0 * found.bar_over_correction:.0f} % of the correction "
         f"from the longest rung to all levels (at z = {found.redshift:.0f}; {place}{left_out})"

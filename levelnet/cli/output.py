@@ -187,6 +187,7 @@ def summary_text(history: History) -> str:
         "",
     ]
     body = [*_milestone_lines(history), "", *_sample_lines(history), "", *_share_lines(history)]
+    body += _helium_share_lines(history)
     if history.lines.names:
         from ..history.samples import sample_rows
 
@@ -251,12 +252,21 @@ def _share_lines(history: History) -> list[str]:
     ranked = sorted(
         zip(channels.names, channels.cumulative_share[-1], strict=True), key=lambda one: -one[1]
     )
+    if math.isnan(ranked[0][1]):
+        return [row("recombined through", "nothing yet: hydrogen is in Saha equilibrium")]
     shown = [f"{name} {100.0 * share:.3f} %" for name, share in ranked[:_CHANNELS_SHOWN]]
     rest = ranked[_CHANNELS_SHOWN:]
     if rest:
         total = 100.0 * sum(share for _, share in rest)
         shown.append(f"{len(rest)} more {total:.3f} %")
     return [row("recombined through", ", ".join(shown))]
+
+
+def _helium_share_lines(history: History) -> list[str]:
+    from ..history.helium_through import through_text
+
+    text = through_text(history)
+    return [row("He I through", text)] if text else []
 
 
 def _diagnostic_lines(history: History) -> list[str]:

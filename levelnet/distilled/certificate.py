@@ -28,6 +28,7 @@ from ..network.tabulation import TabulatedReduction
 from .effective import EffectiveRates, log_capture, log_exchange, log_photo
 from .helium_errors import fresh_equations, helium_errors
 from .history import history_from_table
+from .kept import HELIUM_FRACTIONS
 from .nodes import NodeSource, outline
 from .table import COLLISIONS_K, EffectiveTable
 
@@ -41,14 +42,15 @@ _REDSHIFTS = 80
 # full history takes a minute at that, nearly so.
 _STEPPING, _STEPPING_HELIUM = 1e-8, 1e-7
 
-# Invented: little baryonic matter in a fast, warm universe, and much of it in a slow, cool one.
+# Invented: little baryonic matter in a fast, warm universe, and much of it in a slow, cool one;
+# little helium in the first and much in the second, as far as fits of its abundance go.
 FAR_COSMOLOGIES = (
     Cosmology(
         hubble_km_s_mpc=85.0,
         baryon_density_h2=0.008,
         matter_density_h2=0.3,
         cmb_temperature_k=3.0,
-        helium_mass_fraction=0.1,
+        helium_mass_fraction=HELIUM_FRACTIONS[0],
         effective_neutrinos=6.0,
     ),
     Cosmology(
@@ -56,7 +58,7 @@ FAR_COSMOLOGIES = (
         baryon_density_h2=0.06,
         matter_density_h2=0.08,
         cmb_temperature_k=2.4,
-        helium_mass_fraction=0.4,
+        helium_mass_fraction=HELIUM_FRACTIONS[1],
         effective_neutrinos=1.0,
     ),
 )

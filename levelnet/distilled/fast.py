@@ -124,9 +124,11 @@ class FastHistory:
     frequency_error : float, dimensionless
         Largest relative change of x_e on a frequency grid twice as coarse; 0 without a field.
     notes : tuple of str
-        What the line treatment leaves out, and how the field was counted.
+        What the atoms and the line treatments assume and leave out, with published sizes, and how
+        the field was counted; limits are judged by :func:`levelnet.solve` alone.
     helium : FastHelium or None
-        Fractions of helium, where the table has it; None: neutral and inert.
+        Fractions of helium, where the table has it; None: neutral and inert. The record itself
+        gives them by the same names: 1, 0 and 0 where helium is inert or there is none.
     """
 
     outcome: Outcome
@@ -158,6 +160,27 @@ class FastHistory:
         ):
             frozen_array(self, name, (len(self.redshift),))
 
+    @property
+    def neutral_helium_fraction(self) -> FloatArray:
+        """x_HeI, shape (n_redshift,), dimensionless."""
+        if self.helium is None:
+            return np.ones(len(self.redshift))
+        return self.helium.neutral_helium_fraction
+
+    @property
+    def singly_ionized_helium_fraction(self) -> FloatArray:
+        """x_HeII, shape (n_redshift,), dimensionless."""
+        if self.helium is None:
+            return np.zeros(len(self.redshift))
+        return self.helium.singly_ionized_helium_fraction
+
+    @property
+    def doubly_ionized_helium_fraction(self) -> FloatArray:
+        """x_HeIII, shape (n_redshift,), dimensionless."""
+        if self.helium is None:
+            return np.zeros(len(self.redshift))
+        return self.helium.doubly_ionized_helium_fraction
+
     def to_xarray(self) -> xarray.Dataset:
         """The arrays over redshift as an xarray Dataset (needs the xarray extra).
 
@@ -184,6 +207,14 @@ class FastHistory:
             arrays |= over_redshift(self.helium, FastHelium.__slots__)
         said = {"outcome": self.outcome.value, "notes": "\n".join(self.notes)}
         return xarray.Dataset(arrays, attrs=said | made_by())
+
+    def __repr__(self) -> str:
+        """One line: the range, the size, the outcome."""
+        return (
+            f"<FastHistory z = {self.redshift[0]:g} to {self.redshift[-1]:g}, "
+            f"{len(self.redshift)} redshifts, {'hydrogen' if self.helium is None else 'H and He'}: "
+            f"{self.outcome.value}>"
+        )
 
     def _repr_html_(self) -> str:
         """Show a small table in a notebook."""

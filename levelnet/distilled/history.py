@@ -16,7 +16,6 @@ from ..background.cosmology import Cosmology
 from ..background.parameters import COSMOLOGICAL
 from ..background.quadrature import Quadrature
 from ..errors import InputError, Outcome, RangeError, SolveError
-from ..escape.left_out import left_out
 from ..escape.lines import Lines
 from ..kernels.effective import (
     NO_START,
@@ -30,6 +29,7 @@ from ..pieces import Pieces
 from .differences import plasma_sensitivities
 from .fast import FastHistory, Sensitivities, fractions
 from .kept import check_helium, recombines
+from .notes import table_notes
 from .observables import Observables, observe_electrons, observe_run, table_quadrature
 from .plasma import PlasmaRun, electrons_of, electrons_with, helium_of, run_plasma
 from .prepared import choose_physics, make_atom, rate_names, scale_factors
@@ -169,24 +169,25 @@ def history_from_table(  # noqa: PLR0913 (each is a choice of the caller)
     factors = scale_factors(table, rate_scales)
     atom = make_atom(table, lines, two_photon_rate_per_s, physics, factors)
     _check_range(atom, cosmology, redshift)
+    notes = table_notes(table, cosmology, chosen, two_photon_rate_per_s)
     if recombines(table, cosmology):
         asked, thomson = (observables or sensitivities, sensitivities), scales(physics).thomson
-        return _with_helium(table, atom, cosmology, redshift, relative, asked, thomson, chosen)
+        return _with_helium(table, atom, cosmology, redshift, relative, asked, thomson, notes)
     drive = _drive(table, cosmology, physics) if sensitivities else None
     outputs = -np.log1p(redshift)
     wanted = observables or sensitivities
     grid = table_quadrature(atom, cosmology, float(outputs[-1])) if wanted else None
     run = _run(atom, cosmology, outputs, grid, drive, relative)
     if grid is None:
-        return _assemble(cosmology, redshift, run, None, None, left_out(chosen))
+        return _assemble(cosmology, redshift, run, None, None, notes)
     seen, slopes = observe_run(
         cosmology, grid, run.grid_state, run.grid_slope, drive, scales(physics).thomson
     )
     if drive is None:
-        return _assemble(cosmology, redshift, run, seen, None, left_out(chosen))
+        return _assemble(cosmology, redshift, run, seen, None, notes)
     names = (*COSMOLOGICAL, *CONSTANTS, *(f"ln {name}" for name in rate_names(table)))
     found = _sensitivities(cosmology, redshift, run, drive, names, slopes)
-    return _assemble(cosmology, redshift, run, seen, found, left_out(chosen))
+    return _assemble(cosmology, redshift, run, seen, found, notes)
 
 
 def _with_helium(
@@ -197,7 +198,7 @@ def _with_helium(
     relative: float,
     wanted: tuple[bool, bool],
     thomson: float,
-    lines: Lines,
+    notes: tuple[str, ...],
 ) -> FastHistory:
     """Hydrogen and helium together; wanted: observables, and derivatives, which need them."""
     outputs = -np.log1p(redshift)
@@ -213,7 +214,7 @@ def _with_helium(
         seen = observe_electrons(cosmology, grid, electrons, thomson, early)
         if wanted[1]:
             found = plasma_sensitivities(table, cosmology, redshift, run, grid, thomson)
-    history = _assemble(cosmology, redshift, run, seen, found, left_out(lines))
+    history = _assemble(cosmology, redshift, run, seen, found, notes)
     helium = helium_of(run.state)
     electrons = electrons_with(history.ionized_hydrogen_fraction, helium, cosmology)
     return dataclasses.replace(history, free_electron_fraction=electrons, helium=helium)

@@ -22,7 +22,7 @@ from ..network.reduced import KeptLevels
 if TYPE_CHECKING:
     from .table import EffectiveTable
 
-HELIUM_FRACTIONS = 0.1, 0.4
+HELIUM_FRACTIONS = 0.02, 0.6
 """Helium by mass in the two far cosmologies of a certificate."""
 
 KeptChoice = tuple[tuple[int, int], ...]

@@ -13,7 +13,6 @@ from ..background.cosmology import Cosmology
 from ..background.last_scattering import ionized_redshift
 from ..background.quadrature import quadrature
 from ..errors import SolveError
-from ..escape.left_out import left_out
 from ..escape.lines import Lines
 from ..history.course import Course, electron_fraction_at, state_at
 from ..history.integrate import handover_of, march_field, slow_equations
@@ -22,6 +21,7 @@ from ..history.setup import Accuracy, Grid, Setup
 from ..pieces import Pieces
 from .fast import FastHistory, fractions
 from .kept import check_kept
+from .notes import table_notes
 from .observables import Observables, observe_electrons
 from .table import EffectiveTable
 
@@ -116,7 +116,7 @@ def history_with_field(
         run.field,
         run.frequency_error,
         (
-            *left_out(setup.lines),
+            *table_notes(table, setup.cosmology, setup.lines, setup.two_photon_rate_per_s),
             *field_notes(run.frequency_step, run.frequency_error),
             f"field: frequency step {run.frequency_step:.3g}; in a step photons are off by at most "
             f"{run.photon_number_error:.1e}, atoms by {run.atom_number_error:.1e}, relative",

@@ -14,6 +14,7 @@ from ..errors import InputError
 from .helium_lines import HeliumGroundLines
 from .helium_profile import LARGEST_DAMPING, continuum_escapes, diffusive_escape
 from .helium_treatment import Chances, HeliumSobolev, HeliumSobolevFeedback, HeliumTreatment
+from .lines import Lines
 
 Redistribution = Literal["doppler", "complete", "partial"]
 
@@ -78,8 +79,8 @@ class HeliumContinuum(HeliumTreatment):
 
     @property
     def leaves_out(self) -> str:
-        """Why escape is another with partial redistribution and diffusion."""
-        return _LEAVES_OUT[self.redistribution]
+        """Why escape is another with partial redistribution and diffusion; "" with both."""
+        return "" if self.diffusion else _LEAVES_OUT[self.redistribution]
 
     def __post_init__(self) -> None:
         """Refuse what is not known."""
@@ -185,3 +186,11 @@ HELIUM_TREATMENTS: tuple[HeliumTreatment, ...] = (
     HeliumContinuum("partial"),
     HeliumContinuum("partial", diffusion=True),
 )
+
+
+def helium_treatment(lines: Lines) -> HeliumTreatment:
+    """How photons escape in the lines of He I to its ground state: the one place of the choice."""
+    choice = lines.helium_continuum
+    if choice is not None:
+        return HeliumContinuum(choice.redistribution, choice.diffusion)
+    return HeliumSobolevFeedback() if lines.helium == "sobolev_feedback" else HeliumSobolev()

@@ -80,7 +80,8 @@ class HeliumTreatment:
     assumes, holds_for : tuple of str
         Short sentences; validity figures and their limits.
     leaves_out : str
-        Why escape is another with the continuum, partial redistribution and diffusion.
+        Why escape is another with the continuum, partial redistribution and diffusion; "" with
+        all three.
     """
 
     name: ClassVar[str]
@@ -223,7 +224,7 @@ class HeliumSobolev(HeliumTreatment):
     holds_for: ClassVar[tuple[str, ...]] = (
         "z above 2200, where neutral hydrogen is too rare to absorb inside the 584 A line; below, "
         "He I recombines much later than in truth (Switzer & Hirata 2008, Phys. Rev. D 77, "
-        "083006).",
+        "083006), and x_e is up to 2 per cent too high near z = 1800.",
     )
 
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from .helium_continuum import helium_treatment
 from .lines import Lines
 from .two_photon import STIMULATED_NOTE
 
@@ -18,6 +19,10 @@ _SPONTANEOUS = (
     "two_photon = spontaneous: 2s-1s decay stimulated by the blackbody and absorption of the line "
     "photons by 1s -> 2s are both left out, a per cent in x_e each and of opposite sign "
     "(Kholupenko & Ivanchik 2006, Astron. Lett. 32, 795)"
+)
+_NOT_FED = (
+    "feedback from 584 to 591 A, +0.12 % of x_e near z = 2300 (Kholupenko, Ivanchik & Varshalovich "
+    "2010)"
 )
 
 
@@ -45,4 +50,22 @@ def left_out(lines: Lines) -> tuple[str, ...]:
             "two-photon decay of levels above lines.transfer.highest_two_photon_n = "
             f"{choice.highest_two_photon_n} is left out: 5e-4 of x_e at 3, 1.2e-4 at 4, 2e-5 at 6"
         )
+    return tuple(notes)
+
+
+def helium_left_out(lines: Lines) -> tuple[str, ...]:
+    """What the treatment of the lines of He I assumes and leaves out, one statement each.
+
+    Parameters
+    ----------
+    lines : Lines
+        The choice, where helium has levels.
+    """
+    chosen = helium_treatment(lines)
+    notes = [f"helium lines assume: {text}" for text in chosen.assumes]
+    notes += [f"helium lines hold for: {text}" for text in chosen.holds_for]
+    if chosen.leaves_out:
+        notes.append(f"helium lines: {chosen.leaves_out}")
+    if not lines.helium_fed:
+        notes.append(f"helium lines leave out: {_NOT_FED}")
     return tuple(notes)

@@ -175,6 +175,12 @@ class Lines:
             raise ValueError('transfer: only with hydrogen = "transfer"')
 
     @property
+    def helium_fed(self) -> bool:
+        """Whether lines of He I are lit by what the lines above have sent."""
+        choice = self.helium_continuum
+        return self.helium == "sobolev_feedback" or (choice is not None and choice.feedback)
+
+    @property
     def field_levels(self) -> tuple[tuple[int, int], ...]:
         """(n, l) of the levels that a resolved field talks to apart from the lines, in order."""
         if self.transfer is None:

@@ -14,7 +14,7 @@ from ..atomic.bound_bound import einstein_a
 from ..atomic.helium_two_photon import helium_two_photon_factor
 from ..atomic.physics import Scales, scales
 from ..atomic.two_photon import stimulated_two_photon_factor, two_photon_rate
-from ..escape.helium_continuum import HeliumContinuum
+from ..escape.helium_continuum import helium_treatment
 from ..escape.helium_lines import (
     HeliumGroundLines,
     HigherLines,
@@ -23,7 +23,6 @@ from ..escape.helium_lines import (
     with_strengths,
 )
 from ..escape.helium_past import HeliumPast
-from ..escape.helium_treatment import HeliumSobolev, HeliumSobolevFeedback, HeliumTreatment
 from ..escape.treatment import ResonanceLines, Sobolev
 from ..network.helium import (
     HeliumLadders,
@@ -79,22 +78,11 @@ class HeliumAtoms:
     interpolation_error: float
 
 
-def helium_treatment(setup: Setup) -> HeliumTreatment:
-    """How photons escape in the lines of He I to its ground state: the one place of the choice."""
-    name = setup.lines.helium or "sobolev"
-    if name == "continuum":
-        choice = setup.lines.helium_continuum
-        assert choice is not None
-        return HeliumContinuum(choice.redistribution, choice.diffusion)
-    return HeliumSobolevFeedback() if name == "sobolev_feedback" else HeliumSobolev()
-
-
 def helium_lines_of(setup: Setup, ladders: HeliumLadders) -> HeliumGroundLines:
     """Lines of the kept terms to 1 1S, and which of them lights which."""
-    choice, rate = setup.lines.helium_continuum, setup.helium.intercombination_rate_per_s
-    rates = setup.rates
-    fed = setup.lines.helium == "sobolev_feedback" or (choice is not None and choice.feedback)
+    rates, rate = setup.rates, setup.helium.intercombination_rate_per_s
     assert rate is not None
+    fed = setup.lines.helium_fed
     lines = helium_ground_lines(ladders, fed, higher_lines(setup), rate, setup.physics)
     factor = rates.ground_line_factors(lines.names, "bound_bound")
     if factor is not None:
@@ -179,7 +167,7 @@ def _first(
     network = NeutralHelium(
         with_scales(reduced, factor),
         lines,
-        helium_treatment(setup),
+        helium_treatment(setup.lines),
         decay,
         rate * factor.two_photon_rate,
         stimulation=_stimulation(setup, helium_two_photon_factor, tables.top_k, factor),

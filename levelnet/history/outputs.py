@@ -52,6 +52,7 @@ from .result import (
     SpeciesPopulations,
 )
 from .setup import Setup
+from .start import COLDEST_K, equilibrium_state
 from .validity import Steps, line_figures, steps_of
 
 _SMALLEST_LOG = math.log(1e-300)
@@ -115,7 +116,11 @@ def assemble_history(
         **arrays,
         species=species,
         channels=channels(
-            integrated, steps, redshift, np.array([o.local.solution.flow for o in outputs])
+            integrated,
+            steps,
+            redshift,
+            np.array([o.local.solution.flow for o in outputs]),
+            setup.accuracy.relative,
         ),
         lines=figures,
         milestones=marks,
@@ -240,7 +245,7 @@ def _species(integrated: Integrated, outputs: list[_Output]) -> SpeciesPopulatio
 
 
 def channels(
-    integrated: Integrated, steps: Steps, redshift: FloatArray, net: FloatArray
+    integrated: Integrated, steps: Steps, redshift: FloatArray, net: FloatArray, relative: float
 ) -> Channels:
     """Channels from the net flows to the ground state, shape (n_redshift, n_kept), s^-1."""
     kept = integrated.ladder.kept
@@ -249,10 +254,27 @@ def channels(
     share = net / net.sum(axis=1, keepdims=True)
     cumulative = _cumulative(integrated.trajectory, steps.share)(-np.log1p(redshift))
     total = cumulative.sum(axis=1, keepdims=True)
-    # Above the hand-over nothing has been added up yet: the share of that moment stands in.
+    # At the hand-over nothing has been added up yet: the share of that moment stands in.
     begun = total > 0.0
     cumulative = np.where(begun, cumulative / np.where(begun, total, 1.0), share)
+    quiet = _outputs_in_equilibrium(integrated, redshift, relative)
+    share[:quiet] = cumulative[:quiet] = np.nan
     return Channels(names, net, share, cumulative)
+
+
+def _outputs_in_equilibrium(integrated: Integrated, redshift: FloatArray, relative: float) -> int:
+    """How many outputs, from the first, lie where hydrogen is in Saha equilibrium.
+
+    There its lag behind the expansion is below a tenth of what is asked of x_e, and the net flow to
+    the ground state, the difference of two flows that are equal, is zero to rounding and tolerance.
+    """
+    kelvin = integrated.equations.cosmology.radiation_temperature_k(redshift)
+    low, high = 0, int(np.sum(kelvin >= COLDEST_K))
+    while low < high:
+        middle = (low + high) // 2
+        lag = equilibrium_state(integrated.equations, -math.log1p(float(redshift[middle])))[1]
+        low, high = (middle + 1, high) if abs(lag) < 0.1 * relative else (low, middle)
+    return low
 
 
 def _cumulative(trajectory: Trajectory, share: FloatArray) -> Callable[[FloatArray], FloatArray]:

@@ -38,7 +38,8 @@ class SpeciesPopulations:
     log_departure : ndarray, shape (n_redshift, n_levels), dimensionless
         Natural logarithm of the departure coefficient b = x / x_Saha, with x_Saha the
         Saha-Boltzmann population at T_m with the actual n_e and n_ion. NaN where helium is held as
-        it is (T_r below 1400 K), and only there; excited levels then have population 0.
+        it is (T_r below 1400 K), and only there, for the ground state too, since the ions are no
+        longer followed; excited levels then have population 0.
     """
 
     name: str
@@ -64,9 +65,12 @@ class Channels:
     net_rate_per_s : ndarray, shape (n_redshift, n_channels), s^-1
         Net transitions to the ground state per hydrogen nucleus.
     share : ndarray, shape (n_redshift, n_channels), dimensionless
-        Each channel's part of the net rate at that redshift; sums to 1.
+        Each channel's part of the net rate at that redshift; sums to 1. NaN while hydrogen is in
+        Saha equilibrium (its lag below a tenth of the relative accuracy), where the net rate is
+        zero within rounding.
     cumulative_share : ndarray, shape (n_redshift, n_channels), dimensionless
         Each channel's part of all net recombinations since the start of the integration; sums to 1.
+        NaN likewise.
     """
 
     names: tuple[str, ...]

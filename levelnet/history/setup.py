@@ -247,8 +247,10 @@ class Setup:
         return AtomSize(n_max, self.hydrogen.highest_resolved, lines, self._helium_size())
 
     def _helium_size(self) -> HeliumSize:
-        """What helium has; nothing where there is no helium."""
-        n_max = self.helium.n_max if self.helium_recombines else 0
+        """What helium has; nothing where there is no helium, or where it is inert."""
+        if not self.helium_recombines:
+            return HeliumSize()
+        n_max = self.helium.n_max
         higher = self.lines.helium_higher_lines or "closed"
         return HeliumSize(
             n_max,

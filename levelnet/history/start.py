@@ -17,10 +17,10 @@ from .ion_network import Around
 
 # T_r between which a hand-over is looked for, in steps of 5 per cent; at the upper end hydrogen is
 # in Saha equilibrium in any cosmology the setup admits.
-_COLDEST_K, _HOTTEST_K, _FACTOR = 1100.0, 25_000.0, 1.05
+COLDEST_K, _HOTTEST_K, _FACTOR = 1100.0, 25_000.0, 1.05
 # The same with helium, in units of its energies: its tables end there.
 _COLDEST_HELIUM_K, _HOTTEST_HELIUM_K = 8000.0, 27_500.0
-# Least ln(n_e/n_H) of Saha equilibrium from _COLDEST_K on.
+# Least ln(n_e/n_H) of Saha equilibrium from COLDEST_K on.
 _FEWEST_ELECTRONS = -200.0
 
 
@@ -175,7 +175,7 @@ def hydrogen_handover(equations: SlowEquations, tolerance: float) -> Handover:
         return math.log(lag / tolerance)
 
     today = float(equations.cosmology.radiation_temperature_k(0.0))
-    low = math.log(_COLDEST_K / today)
+    low = math.log(COLDEST_K / today)
     if excess(low) < 0.0:
         return _handover(equations, math.expm1(low))
     while math.exp(low) * today < _HOTTEST_K:

@@ -106,7 +106,7 @@ def shares_figure(
     channels : Channels
         Beyond the five largest the rest is summed into one curve.
     redshift : ndarray, shape (n_redshift,), dimensionless
-        Descending.
+        Descending; what is drawn begins where shares are known.
     peak : float, dimensionless
         Where the visibility peaks; NaN marks nothing.
     ground : str
@@ -117,6 +117,8 @@ def shares_figure(
     matplotlib Figure
         As of :func:`channel_figure`.
     """
+    known = np.isfinite(channels.share).all(axis=1)
+    start = float(redshift[int(np.argmax(known))])
     with style.house_style():
         figure = style.new_figure(style.TWO_COLUMNS_IN, 3.2)
         left, right = figure.subplots(1, 2)
@@ -134,8 +136,8 @@ def shares_figure(
                     label=label,
                 )
             axes.axhline(0.0, color=style.GREY, linewidth=0.5, zorder=0)
-            axes.set_xlim(float(redshift[-1]), float(redshift[0]))
-            axes.set_ylim(*_share_limits([values for _, values in curves]))
+            axes.set_xlim(float(redshift[-1]), start)
+            axes.set_ylim(*_share_limits([np.nan_to_num(values) for _, values in curves]))
             axes.set_xlabel(r"redshift $z$")
             _mark_redshift(axes, peak, "peak of $g$", at_top=True)
             style.panel_letter(axes, letter)
@@ -152,7 +154,7 @@ def _grouped(channels: Channels, shares: FloatArray) -> list[tuple[str, FloatArr
     if len(names) <= _CURVES + 1:
         return list(zip(names, shares.T, strict=True))
     # Ranked by the cumulative share, so that both panels draw the same curves.
-    size = np.max(np.abs(channels.cumulative_share), axis=0)
+    size = np.max(np.abs(np.nan_to_num(channels.cumulative_share)), axis=0)
     top = np.sort(np.argsort(-size, kind="stable")[:_CURVES])
     rest = np.setdiff1d(np.arange(len(names)), top)
     curves = [(names[k], shares[:, k]) for k in top]

@@ -122,7 +122,9 @@ def _variant(job: Job, pieces: Pieces | None, optical_depth_to: tuple[float, ...
             seen.value,
             helium_channels(integrated, redshift)
             if job.species == "He I"
-            else channels(integrated, steps_of(integrated), redshift, flows),
+            else channels(
+                integrated, steps_of(integrated), redshift, flows, setup.accuracy.relative
+            ),
             integrated.field.field if integrated.field and job.with_field else None,
             outcome_of(setup, integrated, map(relaxation_hubble, here)),
         )

@@ -17,6 +17,10 @@ ASKED: dict[Atom, tuple[float, float]] = {"hydrogen": (200.0, 1600.0), "helium":
 LARGE = 0.2
 """Error bar over correction above which a limit is called poorly known."""
 
+FAR_BELOW = 1e-3
+"""A correction that, bar included, is below this part of the error asked (where none was, of the
+largest in the range) tells nothing of how well a limit is known."""
+
 
 @dataclass(frozen=True, slots=True)
 class LimitCheck:
@@ -28,11 +32,15 @@ class LimitCheck:
         Between which redshifts: as much of 200 to 1600 as the study covers; 1600 to 3500 of helium.
     bar_over_correction : float, dimensionless
         Largest error bar over the correction that leads from the longest rung to all levels; NaN
-        where no redshift has a law.
+        where no redshift is left.
     redshift : float, dimensionless
         Where; NaN likewise.
     n_without_law, n_redshift : int
         Redshifts in the range that no law was fitted at, which are left out; and all of them.
+    least : float, dimensionless
+        `FAR_BELOW` of the error asked, or of the largest correction with its bar if none was.
+    n_far_below : int
+        Redshifts with a law at which correction and bar are below `least` of x_e, left out too.
     """
 
     low: float
@@ -41,6 +49,8 @@ class LimitCheck:
     redshift: float
     n_without_law: int
     n_redshift: int
+    least: float
+    n_far_below: int
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -52,7 +62,7 @@ class HeldOutCheck:
     largest_miss_over_bar : ndarray, shape (n_held_out,), dimensionless
         At any redshift.
     largest_bar_over_correction : ndarray, shape (n_held_out,), dimensionless
-        Where a law is fitted, in the range of :class:`LimitCheck`.
+        At the redshifts of :class:`LimitCheck`; NaN where none is left.
     """
 
     largest_miss_over_bar: FloatArray
@@ -75,10 +85,13 @@ def check_limit(study: LevelStudy) -> LimitCheck:
     asked = (study.redshift >= low) & (study.redshift <= high)
     limit = study.limit.free_electron_fraction
     law = asked & (limit.fitted == 1)
-    counts = int(np.sum(asked & ~law)), int(np.sum(asked))
-    if not np.any(law):
+    size = _correction(limit.value, study.rungs.free_electron_fraction[-1])
+    least, told = _told(study, size, limit.relative_error, law)
+    without, far = int(np.sum(asked & ~law)), int(np.sum(law & ~told))
+    counts = without, int(np.sum(asked)), least, far
+    if not np.any(told):
         return LimitCheck(low, high, np.nan, np.nan, *counts)
-    shares = _shares(limit.relative_error, limit.value, study.rungs.free_electron_fraction[-1], law)
+    shares = _shares(limit.relative_error, size, told)
     worst = int(np.argmax(shares))
     return LimitCheck(low, high, float(shares[worst]), float(study.redshift[worst]), *counts)
 
@@ -94,14 +107,33 @@ def check_held_out(study: LevelStudy) -> HeldOutCheck | None:
     miss = np.abs(np.log(seen.value / actual)) / seen.relative_error
     low, high = covered(study.redshift, study.atom)
     law = (study.redshift >= low) & (study.redshift <= high) & (seen.fitted == 1)
-    shares = _shares(seen.relative_error, seen.value, before, law)
-    return HeldOutCheck(np.max(miss, axis=1), np.max(shares, axis=1))
+    size = _correction(seen.value, before)
+    bars = []
+    for k in range(count):
+        told = _told(study, size[k], seen.relative_error[k], law[k])[1]
+        share = _shares(seen.relative_error[k], size[k], told).max()
+        bars.append(share if np.any(told) else np.nan)
+    return HeldOutCheck(np.max(miss, axis=1), np.array(bars))
 
 
-def _shares(bar: FloatArray, value: FloatArray, before: FloatArray, law: BoolArray) -> FloatArray:
-    """Error bar over correction; 0 where no law is."""
+def _correction(value: FloatArray, before: FloatArray) -> FloatArray:
+    """Size of the relative correction."""
+    return np.asarray(np.abs(np.log(value / before)))
+
+
+def _told(
+    study: LevelStudy, correction: FloatArray, bar: FloatArray, law: BoolArray
+) -> tuple[float, BoolArray]:
+    """What is far below, and where a law is fitted to more than that."""
+    whole = np.where(law, correction + bar, 0.0)
+    least = FAR_BELOW * (study.question.within if study.question else float(whole.max()))
+    return least, law & (whole >= least)
+
+
+def _shares(bar: FloatArray, correction: FloatArray, told: BoolArray) -> FloatArray:
+    """Error bar over correction; 0 where nothing is told."""
     with np.errstate(divide="ignore", invalid="ignore"):
-        return np.where(law, bar / np.abs(np.log(value / before)), 0.0)
+        return np.where(told, bar / correction, 0.0)
 
 
 def shell_changes(study: LevelStudy, low: float, high: float) -> FloatArray:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import dataclasses
 import re
 from pathlib import Path
 
@@ -283,7 +284,16 @@ def test_rows_that_an_atom_has_not(tmp_path: Path) -> None:
     assert "bound_bound" not in kept and {"bound_free", "two_photon", "escape"} <= kept
     closed = uncertainties_in(small_setup(2, lines={"hydrogen": "closed"}))
     assert "escape" not in {one.selector.process for one in closed}
+    # Where there is no helium no row of it applies, whatever levels it would have: hydrogen's stay.
+    none = dataclasses.replace(small.cosmology, helium_mass_fraction=0.0)
+    hydrogen = uncertainties_in(small)
+    for lines in ({}, {"helium": "continuum", "helium_continuum": {"redistribution": "partial"}}):
+        without = small_setup(2, cosmology=none, helium={"n_max": 4}, lines=lines)
+        assert uncertainties_in(without) == hydrogen
     path = tmp_path / "mine.csv"
+    path.write_text("process,upper,lower,sigma,group,source\nabsorption,,,0.1,,test\n")
+    with pytest.raises(InputError, match="acts where helium recombines"):
+        uncertainties_in(without, path)
     path.write_text("process,upper,lower,sigma,group,source\nbound_bound,3d,2p,0.1,,test\n")
     with pytest.raises(InputError, match=r"row 1: selector .* matches nothing in hydrogen"):
         uncertainties_in(small, path)

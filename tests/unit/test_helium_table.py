@@ -17,17 +17,24 @@ import pytest
 from scipy.interpolate import make_interp_spline
 
 import levelnet
+from levelnet.atomic.overrides import Rates
 from levelnet.background.cosmology import Cosmology
+from levelnet.cli.table_output import distilled_summary, distilled_values
 from levelnet.distilled import helium_escape
 from levelnet.distilled.helium_errors import fresh_equations, helium_errors
 from levelnet.distilled.history import history_from_table
 from levelnet.distilled.local import rate_of_change
+from levelnet.distilled.notes import table_notes
 from levelnet.distilled.plasma import plasma_of
 from levelnet.distilled.prepared import make_atom
 from levelnet.errors import FileFormatError, InputError, RangeError
+from levelnet.escape.family import treatment
+from levelnet.escape.helium_continuum import helium_treatment
+from levelnet.escape.lines import Lines
 from levelnet.history.equations import SlowEquations
 from levelnet.history.helium_atom import build_helium
 from levelnet.history.integrate import slow_equations
+from levelnet.history.notes import notes_of
 from levelnet.kernels.effective_helium import gain, locate, make_line_room, remember
 from levelnet.kernels.effective_plasma import (
     HELD,
@@ -49,6 +56,15 @@ from tests.small_tables import small_table
 
 # Table against the series behind it: 1e-8 in every logarithm; sums of them cancel a little.
 SAME_RATES = 1e-6
+HELIUM = (
+    "neutral_helium_fraction",
+    "singly_ionized_helium_fraction",
+    "doubly_ionized_helium_fraction",
+)
+JUDGED = (
+    "lines: limits are not judged along a history from a table; levelnet solve warns where one is "
+    "crossed"
+)
 
 
 def equations_of(lines: str, ion: str) -> SlowEquations:
@@ -290,7 +306,7 @@ def test_pieces_are_used_and_foreign_ones_are_not(monkeypatch: pytest.MonkeyPatc
 @pytest.mark.parametrize(
     ("change", "options", "said"),
     [
-        ({"helium_mass_fraction": 0.6}, {}, "helium_mass_fraction = 0.6: .* from 0.1 to 0.4"),
+        ({"helium_mass_fraction": 0.7}, {}, "helium_mass_fraction = 0.7: .* from 0.02 to 0.6"),
         ({}, {"fine_structure_change": 0.01}, "fine_structure_change"),
         ({}, {"redshifts": [12000.0]}, "outside the table"),
     ],
@@ -337,6 +353,58 @@ def test_without_helium_in_the_universe_hydrogen_is_alone() -> None:
     lines = dataclasses.replace(bare.setup.lines, helium=None)
     alone = history_from_table(bare, none, lines=lines)
     assert history.free_electron_fraction.tobytes() == alone.free_electron_fraction.tobytes()
+
+
+def test_a_history_from_a_table_has_the_names_of_a_whole_one() -> None:
+    with_helium = history_from_table(helium_table(), COSMOLOGY, redshifts=[3000.0, 1000.0, 200.0])
+    inert = history_from_table(small_table(), COSMOLOGY, redshifts=[1000.0, 200.0])
+    for history, what in ((with_helium, "H and He"), (inert, "hydrogen")):
+        n = len(history.redshift)
+        shown = f"<FastHistory z = {history.redshift[0]:g} to 200, {n} redshifts, {what}: "
+        assert repr(history) == f"{shown}{history.outcome.value}>"
+        fractions = np.array([getattr(history, name) for name in HELIUM])
+        np.testing.assert_allclose(fractions.sum(axis=0), 1.0, rtol=1e-14)
+    assert with_helium.helium is not None
+    for name in HELIUM:
+        assert getattr(with_helium, name) is getattr(with_helium.helium, name)
+    assert np.all(inert.neutral_helium_fraction == 1.0)  # as in a History with inert helium
+    assert np.all(inert.singly_ionized_helium_fraction == 0.0)
+
+
+@pytest.mark.parametrize("lines", ["sobolev_feedback", "continuum"])
+def test_notes_are_those_of_the_whole_history_but_for_limits(tmp_path: Path, lines: str) -> None:
+    """Sizes: Hirata 2008 and Chluba & Sunyaev 2009 (Lyman-alpha); Switzer & Hirata 2008."""
+    table = helium_table(lines, "saha")
+    history = history_from_table(table, COSMOLOGY, redshifts=[3000.0, 1000.0])
+    asked = (*notes_of(table.setup, treatment("sobolev")), JUDGED)
+    assert set(history.notes) == set(asked) and len(history.notes) == len(asked)
+    said = " ".join(history.notes)
+    assert "change x_e by 1 to 2 per cent" in said  # of Lyman-alpha
+    size = {"sobolev_feedback": "2 per cent too high", "continuum": "up to 0.28 per cent"}[lines]
+    assert (
+        size in said and f"helium lines: {helium_treatment(table.setup.lines).leaves_out}" in said
+    )
+    write_distilled(history, table.setup, tmp_path / "h.h5")
+    assert levelnet.read(tmp_path / "h.h5").notes == history.notes
+    assert distilled_values(history, None)["notes"] == list(history.notes)
+    assert all(one in " ".join(distilled_summary(history).split()) for one in history.notes)
+
+
+def test_notes_follow_the_choice_at_hand_and_not_that_of_the_table() -> None:
+    none = dataclasses.replace(COSMOLOGY, helium_mass_fraction=0.0)
+    assert "there is no helium: [helium] and its lines change nothing" in table_notes(
+        helium_table(), none, helium_table().setup.lines
+    )
+    inert = table_notes(small_table(), COSMOLOGY, Lines(hydrogen="closed"))
+    assert any("neutral and inert" in one for one in inert)
+    assert 'lines: "closed"' in inert
+    rates = Rates(rows=("two_photon,2s,,,8.5,INVENTED: of this test",))
+    changed = dataclasses.replace(
+        small_table(), setup=dataclasses.replace(small_table().setup, rates=rates)
+    )
+    for rate, count in ((None, 1), (8.5, 1), (8.2, 0)):
+        notes = table_notes(changed, COSMOLOGY, Lines(), rate)
+        assert sum("INVENTED" in one for one in notes) == count
 
 
 def test_the_bare_right_hand_side_knows_hydrogen_alone() -> None:

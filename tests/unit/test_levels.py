@@ -10,6 +10,7 @@ from typing import Any
 import numpy as np
 import pytest
 
+from levelnet.cli.level_output import level_summary
 from levelnet.distilled.nodes import process_pool
 from levelnet.errors import InputError, Outcome, SolveError
 from levelnet.history.integrate import output_redshifts
@@ -23,6 +24,7 @@ from levelnet.studies.level_checks import (
     resolved_text,
     shell_changes,
 )
+from levelnet.studies.level_records import Question
 from levelnet.studies.level_requirement import (
     check_covered,
     demands,
@@ -341,12 +343,49 @@ def test_bar_of_the_limit_is_held_against_the_correction() -> None:
     assert less.n_without_law == 1
     assert less.n_redshift == found.n_redshift
     assert less.bar_over_correction < found.bar_over_correction
+    # Early corrections, a thousandth of the late ones, are left out whether or not one more is.
+    assert 0 < found.n_far_below == less.n_far_below < found.n_redshift
     held = check_held_out(study)
     assert held is not None
     assert held.largest_miss_over_bar.shape == (1,)
     assert held.largest_miss_over_bar[0] <= 1.0
     assert 0.0 < held.largest_bar_over_correction[0] < np.inf
     assert check_held_out(dataclasses.replace(study, held_out=None)) is None
+
+
+def test_corrections_far_below_what_is_asked_are_left_out_of_the_figure() -> None:
+    """Closed form: bars of 3e-12, 2e-5 and 1e-4 on corrections of 1e-12, 1e-4 and 1e-3 of x_e."""
+    study = small_study()
+    redshift = study.redshift
+    early, middle = redshift > 1300.0, (redshift <= 1300.0) & (redshift > 800.0)
+    correction = np.select([early, middle], [1e-12, 1e-4], 1e-3)
+    bar = np.select([early, middle], [3e-12, 2e-5], 1e-4)
+    limit = study.limit.free_electron_fraction
+    value = study.rungs.free_electron_fraction[-1] * np.exp(-correction)
+    made = dataclasses.replace(
+        limit, value=value, relative_error=bar, fitted=np.ones_like(limit.fitted)
+    )
+    whole = dataclasses.replace(study.limit, free_electron_fraction=made)
+    asked = (redshift >= 200.0) & (redshift <= 1600.0)
+    for within, least, share, far in (
+        (None, 1.1e-6, 0.2, asked & early),
+        (1e-3, 1e-6, 0.2, asked & early),
+        (0.2, 2e-4, 0.1, asked & (early | middle)),
+        (1.0, 1e-3, 0.1, asked & (early | middle)),
+    ):
+        question = None if within is None else Question(within, 200.0, 1600.0)
+        found = check_limit(dataclasses.replace(study, limit=whole, question=question))
+        assert found.least == pytest.approx(least)
+        assert found.bar_over_correction == pytest.approx(share, rel=1e-4)
+        assert found.n_far_below == np.sum(far)
+    tiny = dataclasses.replace(made, value=study.rungs.free_electron_fraction[-1] * (1.0 - 1e-7))
+    tiny = dataclasses.replace(tiny, relative_error=np.full_like(bar, 1e-8))
+    whole = dataclasses.replace(study.limit, free_electron_fraction=tiny)
+    asked_1 = dataclasses.replace(study, limit=whole, question=Question(1e-3, 200.0, 1600.0))
+    found = check_limit(asked_1)
+    assert np.isnan(found.bar_over_correction) and found.n_far_below == np.sum(asked)
+    text = level_summary(asked_1, verdict(asked_1, 1e-3, 200.0, 1600.0))
+    assert "below 1e-06 of x_e wherever a law is fitted, far below what is asked" in text
 
 
 def requirement(text: str) -> Requirement:

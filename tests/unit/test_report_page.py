@@ -414,6 +414,7 @@ def test_bibtex_entries_are_whole_and_named_apart() -> None:
 
 def test_helium_has_its_tables_figures_and_answers() -> None:
     run = page_of("helium")
+    assert "He II recombined through" in run
     assert "helium is half neutral" in run and "He II/He" in run
     assert "Validity figures of 2 1P-1 1S of He I" in run
     for title in ("Ionization of helium", "Departure coefficients of He I"):

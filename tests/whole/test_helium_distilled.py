@@ -48,7 +48,7 @@ def compare(full: History, fast: object, electrons: float) -> None:
     ("lines", "ion", "universe"),
     [
         ("sobolev_feedback", "network", {}),
-        ("sobolev", "saha", {"baryon_density_h2": 0.05, "helium_mass_fraction": 0.35}),
+        ("sobolev", "saha", {"baryon_density_h2": 0.05, "helium_mass_fraction": 0.6}),
     ],
 )
 def test_small_atoms(lines: str, ion: str, universe: dict[str, float]) -> None:
@@ -144,7 +144,7 @@ def test_commands(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
     assert main(["history", str(table), "--setup", str(other)]) == 2
     assert "helium.n_max = 4, but the table" in capsys.readouterr().err
     assert main(["history", str(table), "--helium-mass-fraction", "0.7"]) == 2
-    assert "checked from 0.1 to 0.4" in capsys.readouterr().err
+    assert "checked from 0.02 to 0.6" in capsys.readouterr().err
     exports = [word for name in ("c99", "fortran", "csv") for word in ("--export", name)]
     assert main(["show", str(table), *exports]) == 0
     written = ("t.c", "t.h", "t.f90", "t.csv", "t-he1.csv", "t-he2.csv")

@@ -323,7 +323,7 @@ def test_helium_in_saha_equilibrium_has_no_second_ion() -> None:
         ("bound_bound,He I 7 1D,He I 2 1P", "He I with helium.n_max = 3"),
         ("escape,He II 3p,", "He II with helium.n_max = 3"),
         ("two_photon,He II 2s,", 'no levels with helium_ion = "saha"'),
-        ("absorption,,", 'it acts with lines.helium = "continuum"'),
+        ("absorption,,", 'acts where helium recombines and lines.helium = "continuum"'),
         ("bound_bound,He I 2 1S,He I 2 1P", "upper term has the higher energy"),
         ("bound_bound,He I 2 3P1,He I 2 3S", "only lines to 1 1S tell J apart"),
         ("bound_free,He I 2 5P,", "is no pattern of terms"),

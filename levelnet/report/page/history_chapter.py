@@ -7,6 +7,7 @@ import math
 import numpy as np
 
 from ...constants import SECONDS_PER_YEAR
+from ...history.helium_through import through_text
 from ...history.result import History
 from ...history.samples import sample_rows
 from ..figures import figure_makers
@@ -84,7 +85,10 @@ def _answer(history: History) -> str:
 def _found(history: History) -> tuple[Block, ...]:
     marks = history.milestones
     years = SECONDS_PER_YEAR
-    helium = (("helium is half neutral", number(half_neutral(history), ".1f")),)
+    helium = (
+        ("helium is half neutral", number(half_neutral(history), ".1f")),
+        ("He II recombined through", through_text(history) or "not known from these outputs"),
+    )
     events = Facts(
         (
             *(helium if history.helium is not None else ()),
@@ -123,9 +127,9 @@ def _channels(history: History) -> Table:
     channels = history.channels
     shares = channels.cumulative_share[-1]
     order = np.argsort(-np.abs(shares), kind="stable").tolist()
-    rows = [(channels.names[k], f"{100.0 * shares[k]:.4f}") for k in order[:_CHANNELS]]
+    rows = [(channels.names[k], number(100.0 * shares[k], ".4f")) for k in order[:_CHANNELS]]
     if rest := order[_CHANNELS:]:
-        rows.append((f"{len(rest)} more", f"{100.0 * shares[rest].sum():.4f}"))
+        rows.append((f"{len(rest)} more", number(100.0 * shares[rest].sum(), ".4f")))
     caption = f"How atoms reached the ground state, all down to z = {history.redshift[-1]:g}"
     return Table(caption, ("channel", "share (%)"), tuple(rows))
 

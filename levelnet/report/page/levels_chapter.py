@@ -222,6 +222,13 @@ def _trust(study: LevelStudy) -> tuple[Block, ...]:
     rows.append(
         ("redshifts without a law", f"{limit.n_without_law} of {limit.n_redshift} in that range")
     )
+    if limit.n_far_below:
+        rows.append(
+            (
+                f"redshifts with correction and bar below {limit.least:.0e} of x_e, left out",
+                f"{limit.n_far_below} of {limit.n_redshift}",
+            )
+        )
     if checked is not None and study.held_out is not None:
         rows += [
             (

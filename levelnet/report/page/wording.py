@@ -181,7 +181,9 @@ def largest_said(what: str, pairs: Iterable[tuple[str, float]]) -> str:
 
 
 def most_through(channels: Channels) -> str:
-    """Say which channel most atoms took."""
+    """Say which channel most atoms took; nothing where none has recombined."""
+    if math.isnan(float(channels.cumulative_share[-1].max())):
+        return ""
     first = int(np.argmax(channels.cumulative_share[-1]))
     share = 100.0 * channels.cumulative_share[-1, first]
     return f"Most atoms, {share:.2f} %, went through {channels.names[first]}."
