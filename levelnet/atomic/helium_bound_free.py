@@ -155,8 +155,9 @@ def helium_recombination_cm3_per_s(
         Temperature of the electrons.
     radiation_temperature_k : float, K, optional
         Temperature of the blackbody that stimulates recombination; None: no stimulated part.
-    captured : ndarray, optional
-        What :func:`captured_spectrum` gives for this radiation temperature, where it is at hand.
+    captured : ndarray, shape (n_levels, n_nodes), s^-1, optional
+        What :func:`captured_spectrum` gives for this very radiation temperature, where it is at
+        hand; nothing checks that.
 
     Returns
     -------
@@ -224,8 +225,9 @@ def helium_photoionization_per_s(
         Cross sections.
     radiation_temperature_k : float, K, 0.02 to 1e5
         Temperature of the blackbody.
-    captured : ndarray, optional
-        What :func:`captured_spectrum` gives for this temperature, where it is at hand.
+    captured : ndarray, shape (n_levels, n_nodes), s^-1, optional
+        What :func:`captured_spectrum` gives for this very temperature, where it is at hand;
+        nothing checks that.
 
     Returns
     -------

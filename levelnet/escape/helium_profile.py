@@ -98,11 +98,11 @@ def continuum_escape(depth: float, continuum: float, damping: float) -> Chance:
 
 
 def continuum_escapes(columns: FloatArray) -> FloatArray:
-    """Give the same for many lines at once; dampings must be in range.
+    """Give the same for many lines at once; dampings up to 0.03, which the caller sees to.
 
     Parameters
     ----------
-    columns : ndarray, shape (n_lines, 3), dimensionless
+    columns : ndarray of float64, shape (n_lines, 3), C-ordered, dimensionless
         Depth, continuum and damping of each line.
 
     Returns
@@ -113,12 +113,15 @@ def continuum_escapes(columns: FloatArray) -> FloatArray:
     Raises
     ------
     InputError
-        If a depth is not a number.
+        If a number of a line is negative, infinite or none.
     """
     found = np.empty((len(columns), 4))
     half = _PER_UNIT // 2
     if escape_of_lines(columns, half, _cells(half), _cells(_PER_UNIT), found):
-        raise InputError("optical depth of a line or of the continuum inside it: not a number")
+        raise InputError(
+            "optical depth of a line, of the continuum inside it, or damping: negative, infinite or "
+            "not a number"
+        )
     return found
 
 

@@ -160,18 +160,19 @@ def escape_of_lines(
     Returns
     -------
     int
-        0; 1 if a depth is not a number, or a line reaches beyond the cells.
+        0; 1 if one of a line's numbers is none, negative or infinite; 2 if it reaches beyond the
+        cells.
     """
     wide = np.empty(4)
     for line in range(columns.shape[0]):
         tau, c, a = columns[line, 0], columns[line, 1], columns[line, 2]
-        if not tau + c >= 0.0:
+        if not (0.0 <= tau < np.inf and 0.0 <= c < np.inf and a >= 0.0):
             return 1
         half = cells_to(reach_of_line(tau, c, a), per_unit)
         if escape_with_continuum(tau, c, a, half, coarse, wide):
-            return 1
+            return 2
         if escape_with_continuum(tau, c, a, 2 * half, fine, out[line]):
-            return 1
+            return 2
         for k in range(4):
             out[line, k] = (4.0 * out[line, k] - wide[k]) / 3.0
     return 0

@@ -12,7 +12,7 @@ from scipy.special import voigt_profile
 from levelnet.errors import InputError
 from levelnet.escape import helium_profile
 from levelnet.escape.helium_profile import continuum_escape, continuum_escapes
-from levelnet.kernels.continuum_escape import escape_with_continuum
+from levelnet.kernels.continuum_escape import escape_of_lines, escape_with_continuum
 
 DEPTHS = (1e-12, 1e-3, 0.7, 2.0, 30.0, 1e4, 2e7, 1e12)
 DAMPINGS = (0.0, 5e-6, 2e-3, 0.03)
@@ -163,9 +163,19 @@ def test_many_lines_at_once_are_the_same_bits() -> None:
     np.testing.assert_array_equal(found, [continuum_escape(*one) for one in lines])
 
 
-@pytest.mark.parametrize("place", [0, 1])
-def test_a_depth_that_is_not_a_number_is_refused(place: int) -> None:
-    columns = np.array([[1.0, 0.1, 1e-3], [1.0, 0.1, 1e-3]])
-    columns[1, place] = math.nan
-    with pytest.raises(InputError, match="not a number"):
+@pytest.mark.parametrize(
+    ("place", "value"),
+    [(0, math.nan), (1, math.nan), (2, math.nan), (0, -1.0), (1, -0.5), (0, math.inf), (2, -1e-3)],
+)
+def test_numbers_of_a_line_that_are_none_are_refused(place: int, value: float) -> None:
+    columns = np.array([[1.0, 2.0, 1e-3], [1.0, 2.0, 1e-3]])
+    columns[1, place] = value
+    with pytest.raises(InputError, match="negative, infinite or not a number"):
         continuum_escapes(columns)
+
+
+def test_lines_beyond_the_cells_are_told() -> None:
+    cells, out = helium_profile._cells(36)[:50], np.empty((1, 4))
+    line = np.array([[1e9, 1e-3, 1e-3]])
+    assert escape_of_lines(line, 18, cells, cells, out) == 2
+    assert escape_of_lines(-line, 18, cells, cells, out) == 1
