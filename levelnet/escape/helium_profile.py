@@ -119,8 +119,8 @@ def continuum_escapes(columns: FloatArray) -> FloatArray:
     half = _PER_UNIT // 2
     if escape_of_lines(columns, half, _cells(half), _cells(_PER_UNIT), found):
         raise InputError(
-            "optical depth of a line, of the continuum inside it, or damping: negative, infinite or "
-            "not a number"
+            "optical depth of a line, of the continuum inside it, or damping: negative, infinite "
+            "or not a number"
         )
     return found
 
