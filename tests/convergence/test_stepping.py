@@ -346,7 +346,7 @@ def test_a_jump_costs_steps_but_no_digits() -> None:
 
 
 def test_steps_keep_to_a_bound_that_moves_and_to_a_tolerance_that_goes_with_the_state() -> None:
-    def decay(tolerance: float | Callable[[np.ndarray], np.ndarray]) -> Trajectory:
+    def decay(tolerance: float | Callable[[float, np.ndarray], np.ndarray]) -> Trajectory:
         return integrate(
             *both(lambda t, y: -y, lambda t, y: (-np.eye(1), np.zeros(1))),
             0.0,
@@ -358,7 +358,7 @@ def test_steps_keep_to_a_bound_that_moves_and_to_a_tolerance_that_goes_with_the_
             longest_step=lambda t: 0.02 if t < 1.0 else math.inf,
         )
 
-    held, eased = decay(1e-9), decay(lambda y: 1e-9 / np.maximum(y, 1e-3))
+    held, eased = decay(1e-9), decay(lambda t, y: 1e-9 / np.maximum(y, 1e-3))
     steps = np.diff(held.time)
     assert steps[held.time[:-1] < 1.0].max() <= 0.02 * (1.0 + ROUND_OFF)
     assert steps[held.time[:-1] >= 1.0].max() > 0.04
