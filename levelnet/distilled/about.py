@@ -29,10 +29,11 @@ def pair_names(table: EffectiveTable) -> list[str]:
     return [f"{names[i]}-{names[j]}" for i, j in pairs]
 
 
-def about_lines(table: EffectiveTable) -> list[str]:
+def about_lines(table: EffectiveTable, measured: bool = True) -> list[str]:
     """Return the head of an exported file as lines of ASCII of at most 96 characters.
 
-    Nothing in them can end or open a comment of C, whatever the title of the setup is.
+    Nothing in them can end or open a comment of C, whatever the title of the setup is. With
+    `measured` the file holds the atom with measured constants, else that of the table.
     """
     setup = table.setup
     atom = setup.hydrogen
@@ -40,6 +41,12 @@ def about_lines(table: EffectiveTable) -> list[str]:
     resolved = f" (whole shells above n = {top})" if top < atom.n_max else ""
     # By its name, since nothing down here may import the top of the package.
     version = import_module("levelnet").__version__
+    start = "what follows is the atom with these changes"
+    if measured:
+        start = (
+            "what follows starts from the measured constants, so pass these changes to have those "
+            "of the setup"
+        )
     species = "hydrogen" if table.helium is None else "hydrogen and helium"
     said = [
         f"Effective rates of {species}, made by levelnet {version}; do not edit.",
@@ -50,8 +57,7 @@ def about_lines(table: EffectiveTable) -> list[str]:
         f"({setup.lines.lyman_lines}), two-photon decay {setup.lines.two_photon}",
         f"constants:   {CODATA_EDITION}; changes in the setup: fine structure "
         f"{setup.physics.fine_structure_change:g}, electron mass "
-        f"{setup.physics.electron_mass_change:g}; what follows starts from the measured constants, "
-        "so pass these changes to have those of the setup",
+        f"{setup.physics.electron_mass_change:g}; {start}",
         *_helium(table),
         *(f"overridden:  {json.dumps(f'{one.text} ({one.source})')}" for one in setup.rates.table),
         f"tolerance:   {table.tolerance:g} in the natural logarithm of each quantity",
@@ -78,7 +84,8 @@ def _helium(table: EffectiveTable) -> list[str]:
     said = f"helium:      n_max = {table.setup.helium.n_max}, lines {lines.helium or 'sobolev'}"
     if choice is not None:
         said += (
-            f" (redistribution {choice.redistribution}, feedback {str(choice.feedback).lower()})"
+            f" (redistribution {choice.redistribution}, feedback {str(choice.feedback).lower()}, "
+            f"diffusion {str(choice.diffusion).lower()})"
         )
     ion = "Saha equilibrium" if table.helium_ion is None else "a network"
     return [f"{said}, He II in {ion}; with the measured constants alone"]

@@ -13,6 +13,7 @@ import numpy as np
 
 from .. import constants as const
 from ..arrays import FloatArray
+from ..atomic.physics import UNCHANGED
 from ..background.matter import compton_rate_per_s
 from ..errors import InputError
 from ..history.atom import open_lyman_lines, resonance_lines
@@ -33,8 +34,9 @@ from .grid_text import grid_text
 from .helium_code import helium_c, helium_fortran
 from .helium_text import helium_endings, helium_texts
 from .kept import check_without_field
+from .series import COLLISIONS_K
 from .stimulation import stimulation_c, stimulation_fortran, stimulation_polynomials
-from .table import COLLISIONS_K, EffectiveTable
+from .table import EffectiveTable
 
 LANGUAGES = ("c99", "fortran", "csv")
 ENDINGS = {"c99": (".h", ".c"), "fortran": (".f90",), "csv": (".csv",)}
@@ -71,6 +73,7 @@ def exported_texts(table: EffectiveTable, language: str, name: str) -> dict[str,
     if language not in LANGUAGES:
         raise InputError(f'export = "{language}": allowed are {", ".join(LANGUAGES)}')
     if language == "csv":
+        _check_measured(table)
         texts = {".csv": grid_text(table)} | helium_texts(table)
         return {f"{name}{end}": text for end, text in texts.items()}
     check_without_field(table.setup.lines)
@@ -88,6 +91,15 @@ def exported_texts(table: EffectiveTable, language: str, name: str) -> dict[str,
         # Many names take several lines, each a comment of its own.
         blanks[key] = f"\n{start}    ".join(textwrap.wrap(blanks[key], 55))
     return {f"{name}{end}": fill(f"source{end}", blanks) for end in ENDINGS[language]}
+
+
+def _check_measured(table: EffectiveTable) -> None:
+    """Refuse numbers of helium with changed constants: its lines and decays have powers apart."""
+    if table.helium is not None and table.scales != UNCHANGED:
+        raise InputError(
+            'export = "csv": a table with levels of helium is written with the measured constants '
+            "alone; take table.with_constants()"
+        )
 
 
 def endings(language: str, setup: Setup) -> tuple[str, ...]:

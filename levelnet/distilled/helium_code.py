@@ -67,6 +67,7 @@ def helium_fortran(table: EffectiveTable, name: str) -> dict[str, str]:
     if table.helium is None or lines is None:
         return {"helium_data": "", "helium_code": ""}
     blanks = _shared(table, name, fortran_number, _in_brackets, 1)
+    blanks["line_names"] = _folded(blanks["line_names"], "  !   ")
     stages = [_stage_fortran(*one, name) for one in _stages(table)]
     blanks["stages"] = "".join(fill("stage_data.f90", one) for one in stages)
     data = fill("helium_data.f90", blanks)
@@ -138,7 +139,7 @@ def _stage_c(
 ) -> dict[str, str]:
     blanks = _stage_words(ion, stage, names, prefix)
     for key in ("level_names", "pair_names"):
-        blanks[key] = "\n     ".join(textwrap.wrap(blanks[key], 55))
+        blanks[key] = _folded(blanks[key], "     ")
     for key, end in (("x_low", 0), ("x_high", 1), ("y_low", 2), ("y_high", 3)):
         blanks[key] = number(atom.span[end])
     for key, values in _stage_numbers(atom).items():
@@ -155,7 +156,7 @@ def _stage_fortran(
 ) -> dict[str, str]:
     blanks = _stage_words(ion, stage, names, prefix)
     for key in ("level_names", "pair_names"):
-        blanks[key] = "\n  !   ".join(textwrap.wrap(blanks[key], 55))
+        blanks[key] = _folded(blanks[key], "  !   ")
     for key, values in (("span", atom.span), ("pair", atom.pair), ("level", atom.level)):
         blanks[key] = _in_brackets(map(fortran_number, values.ravel()))
     for key in ("lower", "upper"):
@@ -163,6 +164,11 @@ def _stage_fortran(
     blanks["top"] = str(stage.departure.shape[-1] - 1)
     blanks["data"] = "\n".join(series_statements(stage, f"{ion}_"))
     return blanks
+
+
+def _folded(text: str, start: str) -> str:
+    """Many names on lines of their own in a comment."""
+    return f"\n{start}".join(textwrap.wrap(text, 55))
 
 
 def _in_brackets(items: Iterable[str]) -> str:

@@ -9,6 +9,8 @@ from __future__ import annotations
 import ctypes
 import dataclasses
 import math
+import shutil
+import subprocess
 from collections.abc import Callable
 from functools import lru_cache
 from pathlib import Path
@@ -18,6 +20,7 @@ import numpy as np
 import pytest
 from scipy.integrate import solve_ivp
 
+from levelnet.distilled.build import distill
 from levelnet.distilled.export import exported_texts
 from levelnet.distilled.history import history_from_table
 from levelnet.distilled.plasma import packed, plasma_of
@@ -25,11 +28,12 @@ from levelnet.distilled.prepared import make_atom
 from levelnet.distilled.series import local_series
 from levelnet.distilled.stage import StageTable
 from levelnet.distilled.table import EffectiveTable
+from levelnet.escape.lines import Lines
 from levelnet.kernels.effective import Atom, Universe, hubble_at, split_odds
 from levelnet.kernels.effective_helium import gain, locate, make_line_room, remember
 from levelnet.kernels.effective_plasma import evaluate, make_desk, make_memory
 from levelnet.kernels.plasma_steps import saha_state
-from tests.helium_tables import helium_table
+from tests.helium_tables import helium_setup, helium_table
 from tests.small_runs import COSMOLOGY
 from tests.unit.test_export import AGREEMENT, OUTSIDE, Changes, build
 
@@ -435,7 +439,6 @@ def test_right_hand_side_refuses_what_is_no_condition(
     assert status(matter=2500.0) == OUTSIDE["ratio"]
     assert status(matter=8100.0) == OUTSIDE["matter"]
     assert status(expansion=1e-20) == ESCAPE
-    assert compiled(language, "sobolev").side is not None
 
 
 class Around(NamedTuple):
@@ -560,3 +563,19 @@ def test_says_what_it_is_and_stays_short(language: str) -> None:
     without = dataclasses.replace(table, helium=None, helium_lines=None)
     for text in exported_texts(without, language, "lantern").values():
         assert "helium_column" not in text
+
+
+@pytest.mark.skipif(shutil.which("gfortran") is None, reason="no gfortran on this machine")
+def test_many_lines_are_no_longer_than_fortran_allows(tmp_path: Path) -> None:
+    """ISO 1539-1:2018, 6.3.2.1: a line has at most 132 characters. He I has 11 lines here."""
+    setup = helium_setup("sobolev", "saha", helium={"n_max": 9, "helium_ion": "saha"})
+    lines = Lines(helium="sobolev", helium_higher_lines="free")
+    table = distill(dataclasses.replace(setup, lines=lines), tolerance=1e-6, certify=False)
+    assert table.helium_lines is not None
+    assert len(table.helium_lines.names) == 11
+    text = exported_texts(table, "fortran", "lantern")["lantern.f90"]
+    assert max(map(len, text.splitlines())) <= 132
+    (tmp_path / "lantern.f90").write_text(text, encoding="ascii")
+    command = ["gfortran", "-std=f2018", "-Wall", "-Werror", "-fsyntax-only", "lantern.f90"]
+    done = subprocess.run(command, cwd=tmp_path, capture_output=True, text=True, check=False)
+    assert done.returncode == 0, done.stderr

@@ -363,6 +363,10 @@ def test_table_is_not_left(atom: str) -> None:
         with pytest.raises(RangeError, match=r"T_m/T_r = .*allowed: 0.5 to 1.5"):
             table.effective_rates(4000.0, 4000.0 * ratio, atom)
     table.effective_rates(1400.000001, 2100.0, atom)
+    # Collisional ionization is left out, as for hydrogen.
+    with pytest.raises(RangeError, match=r"T_m = 8100 K: .*up to 8000 K or T_r"):
+        table.effective_rates(6000.0, 8100.0, atom)
+    table.effective_rates(9000.0, 9000.0, atom)
 
 
 @pytest.mark.parametrize(

@@ -12,9 +12,11 @@
   ! The delays are ln of the ratio of energies.
   integer, parameter, public :: n_he1_lines = @{n_lines}
   integer, parameter, public :: he1_lit_by(n_he1_lines) = [ &
-@{lit_by} ]
+@{lit_by} &
+      ]
   real(dp), parameter, public :: he1_delay(n_he1_lines) = [ &
-@{delay} ]
+@{delay} &
+      ]
   public :: he1_escape, he1_blackbody, he1_blue_side, plasma_right_hand_side
 
   ! Local conditions of hydrogen and helium. Every fraction is asked for, so that none need be
@@ -56,13 +58,17 @@
 
   ! Lines of He I: upper level, A in 1/s, tau H/n_HeI in cm^3/s, energy in K; and two photons.
   integer, parameter :: he1_line_upper(n_he1_lines) = [ &
-@{line_upper} ]
+@{line_upper} &
+      ]
   real(dp), parameter :: he1_line_a(n_he1_lines) = [ &
-@{line_a} ]
+@{line_a} &
+      ]
   real(dp), parameter :: he1_line_depth(n_he1_lines) = [ &
-@{line_depth} ]
+@{line_depth} &
+      ]
   real(dp), parameter :: he1_line_energy_k(n_he1_lines) = [ &
-@{line_energy_k} ]
+@{line_energy_k} &
+      ]
   integer, parameter :: he1_decay = @{decay}
   real(dp), parameter :: he1_decay_rate = @{decay_rate}
 
