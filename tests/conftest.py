@@ -12,7 +12,7 @@ import shutil
 import sys
 import tempfile
 from pathlib import Path
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 import pytest
 from hypothesis import settings
@@ -29,6 +29,25 @@ def _pin_threads() -> None:
         raise RuntimeError("numpy was imported before the tests could set the number of threads")
     for name in ("OPENBLAS", "OMP", "MKL", "VECLIB_MAXIMUM", "NUMEXPR"):
         os.environ[f"{name}_NUM_THREADS"] = "1"
+
+
+def _let_relative_be_relative() -> None:
+    # Unless told otherwise pytest.approx lets an absolute difference of 1e-12 pass, whatever `rel`
+    # says: more than most numbers in cgs units are.
+    plain = pytest.approx
+
+    def approx(expected: Any, rel: Any = None, abs: Any = None, nan_ok: bool = False) -> Any:
+        import numpy as np
+
+        if rel is not None and abs is None and _is_never_zero(np.asarray(expected)):
+            abs = 0.0
+        return plain(expected, rel=rel, abs=abs, nan_ok=nan_ok)
+
+    pytest.approx = approx
+
+
+def _is_never_zero(expected: Any) -> bool:
+    return expected.dtype.kind in "fi" and bool((expected != 0).all())
 
 
 def _choose_numba_cache() -> None:
@@ -53,6 +72,7 @@ def _temporary_folder(name: str) -> str:
 
 
 _pin_threads()
+_let_relative_be_relative()
 _choose_numba_cache()
 # The disk cache starts empty, so that every run of the tests builds it.
 os.environ["LEVELNET_CACHE"] = _temporary_folder("cache")

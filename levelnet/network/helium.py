@@ -12,7 +12,7 @@ import functools
 import itertools
 import math
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from typing import NamedTuple
 
 import numpy as np
@@ -74,7 +74,7 @@ class HeliumLadders:
     interior : tuple of two Interior
         Singlets and triplets; `position` counts in `levels`.
     between : tuple of two SpinLines
-        Lines between their eliminated levels.
+        Lines between their eliminated levels; follows from the rest.
     """
 
     levels: HeliumLevels
@@ -83,7 +83,14 @@ class HeliumLadders:
     kept: KeptLevels
     kept_position: IntArray
     interior: tuple[Interior, Interior]
-    between: tuple[SpinLines, SpinLines]
+    between: tuple[SpinLines, SpinLines] = field(init=False)
+
+    def __post_init__(self) -> None:
+        """Cut the lines between eliminated levels out of all."""
+        own = [
+            _spin_lines(self.levels, self.lines, side, s) for s, side in enumerate(self.interior)
+        ]
+        object.__setattr__(self, "between", tuple(own))
 
 
 class KeptLines(NamedTuple):
@@ -137,16 +144,7 @@ def helium_ladders(
     for spin, shift in ((0, 0), (1, first_triplet - 1)):
         own = {(n, l) for n, l, s in kept if s == spin}
         sides.append(interior_of(n_max, np.zeros(0, dtype=np.int64), own, shift))
-    between = [_spin_lines(levels, lines, side, spin) for spin, side in enumerate(sides)]
-    return HeliumLadders(
-        levels,
-        lines,
-        continuum,
-        chosen,
-        position,
-        (sides[0], sides[1]),
-        (between[0], between[1]),
-    )
+    return HeliumLadders(levels, lines, continuum, chosen, position, (sides[0], sides[1]))
 
 
 def _spin_lines(levels: HeliumLevels, lines: HeliumLines, inside: Interior, spin: int) -> SpinLines:

@@ -170,7 +170,7 @@ def test_the_default_table() -> None:
         *("two_photon", "bound_bound", "bound_free", "escape", "compton")
     }
     for one in every:
-        assert re.match(r"(published|estimate): .*(19|20)\d\d", one.source), one.source
+        assert re.match(r"(published|estimate): .*((19|20)\d\d|NIST ASD)", one.source), one.source
     of_helium = {one.selector.species for one in every[len(rows) :]}
     assert of_helium == {"He I", "He II", "H I"}  # the last is absorption inside its lines
     found = error_budget(WEIGHED, rows)

@@ -59,7 +59,8 @@ def test_rungs_are_histories_of_their_own() -> None:
     assert same == pytest.approx(history.matter_temperature_k, rel=1e-14)
     rows = [int(np.flatnonzero(history.redshift == z)[0]) for z in study.population_redshift]
     low = history.populations("H I")[rows][:, : len(study.level_n)]
-    assert study.rungs.population[rung] == pytest.approx(low, rel=1e-13)
+    # Of neutral hydrogen at 1e-4, stepping at other outputs leaves 2e-11.
+    np.testing.assert_allclose(study.rungs.population[rung], low, rtol=1e-10)
     levels = history.levels("H I")
     assert np.array_equal(levels.n[: len(study.level_n)], study.level_n)
     assert np.array_equal(levels.l[: len(study.level_l)], study.level_l)

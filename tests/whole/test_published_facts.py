@@ -244,7 +244,7 @@ def test_three_level_limit(redshift: float) -> None:
     rates = live_reduction(ladder).rates(t_r, 0.97 * t_r)
     coupling = Sobolev().couple(lines, kept, here)
     coupling = with_two_photon(coupling, kept, here, TWO_PHOTON, "spontaneous")
-    forced = rates._replace(exchange=np.array([[0.0, 3e15], [1e15, 0.0]]))
+    forced = rates._replace(exchange=np.array([[0.0, 3e10], [1e10, 0.0]]))
     found = solve_kept(kept, forced, coupling, here).net_flow
     total = float(rates.recombination.sum())
     in_field = float(live_reduction(ladder).rates(t_r, t_r).recombination.sum())
@@ -257,8 +257,9 @@ def test_three_level_limit(redshift: float) -> None:
     c = (1.0 + k * TWO_PHOTON) / (1.0 + k * (TWO_PHOTON + beta))
     up = beta * (1.0 - x) * math.exp(-0.75 * chi / (EV_K * t_r))
     expected = c * (total * density * x * x - up)
-    # Peebles leaves out the stimulated part of Lyman-alpha (e^-30) and what 1/1e15 leaves open.
-    assert found == pytest.approx(expected, rel=1e-6)
+    # Peebles leaves out the stimulated part of Lyman-alpha (e^-30); exchange at 1e10 per s leaves
+    # 1e-7 of balance open, and its rounding as much.
+    assert found / expected == pytest.approx(1.0, rel=1e-6)
 
 
 def test_feedback_among_lyman_lines() -> None:
