@@ -14,6 +14,11 @@ from .certificate import Certificate, level_name
 from .table import EffectiveTable
 
 _WIDTH = 96
+_CHANGES = {
+    "in": "what follows holds these changes",
+    "passed": "what follows starts from the measured constants, so pass these changes to have "
+    "those of the setup",
+}
 
 
 def level_names(kept: KeptLevels) -> list[str]:
@@ -29,10 +34,18 @@ def pair_names(table: EffectiveTable) -> list[str]:
     return [f"{names[i]}-{names[j]}" for i, j in pairs]
 
 
-def about_lines(table: EffectiveTable) -> list[str]:
+def about_lines(table: EffectiveTable, changes_are: str = "in") -> list[str]:
     """Return the head of an exported file as lines of ASCII of at most 96 characters.
 
     Nothing in them can end or open a comment of C, whatever the title of the setup is.
+
+    Parameters
+    ----------
+    table : EffectiveTable
+        What is exported.
+    changes_are : "in" or "passed"
+        Whether the numbers hold the changed constants of the setup, or those of the measured atom,
+        to which a program passes changes.
     """
     setup = table.setup
     atom = setup.hydrogen
@@ -50,8 +63,7 @@ def about_lines(table: EffectiveTable) -> list[str]:
         f"({setup.lines.lyman_lines}), two-photon decay {setup.lines.two_photon}",
         f"constants:   {CODATA_EDITION}; changes in the setup: fine structure "
         f"{setup.physics.fine_structure_change:g}, electron mass "
-        f"{setup.physics.electron_mass_change:g}; what follows starts from the measured constants, "
-        "so pass these changes to have those of the setup",
+        f"{setup.physics.electron_mass_change:g}; {_CHANGES[changes_are]}",
         *_helium(table),
         *(f"overridden:  {json.dumps(f'{one.text} ({one.source})')}" for one in setup.rates.table),
         f"tolerance:   {table.tolerance:g} in the natural logarithm of each quantity",
@@ -78,7 +90,8 @@ def _helium(table: EffectiveTable) -> list[str]:
     said = f"helium:      n_max = {table.setup.helium.n_max}, lines {lines.helium or 'sobolev'}"
     if choice is not None:
         said += (
-            f" (redistribution {choice.redistribution}, feedback {str(choice.feedback).lower()})"
+            f" (redistribution {choice.redistribution}, feedback {str(choice.feedback).lower()}, "
+            f"diffusion {str(choice.diffusion).lower()})"
         )
     ion = "Saha equilibrium" if table.helium_ion is None else "a network"
     return [f"{said}, He II in {ion}; with the measured constants alone"]

@@ -30,7 +30,8 @@ from .helium_errors import fresh_equations, helium_errors
 from .history import history_from_table
 from .kept import HELIUM_FRACTIONS
 from .nodes import NodeSource, outline
-from .table import COLLISIONS_K, EffectiveTable
+from .series import COLLISIONS_K
+from .table import EffectiveTable
 
 Progress = Callable[[str, float], None]
 

@@ -33,8 +33,9 @@ from .grid_text import grid_text
 from .helium_code import helium_c, helium_fortran
 from .helium_text import helium_endings, helium_texts
 from .kept import check_without_field
+from .series import COLLISIONS_K
 from .stimulation import stimulation_c, stimulation_fortran, stimulation_polynomials
-from .table import COLLISIONS_K, EffectiveTable
+from .table import EffectiveTable
 
 LANGUAGES = ("c99", "fortran", "csv")
 ENDINGS = {"c99": (".h", ".c"), "fortran": (".f90",), "csv": (".csv",)}
@@ -66,11 +67,13 @@ def exported_texts(table: EffectiveTable, language: str, name: str) -> dict[str,
     Raises
     ------
     InputError
-        If the language is not known or the name cannot be one in it.
+        If the language is not known or the name cannot be one in it; for csv also if the table has
+        levels of helium and changed constants.
     """
     if language not in LANGUAGES:
         raise InputError(f'export = "{language}": allowed are {", ".join(LANGUAGES)}')
     if language == "csv":
+        _check_measured_helium(table.setup)
         texts = {".csv": grid_text(table)} | helium_texts(table)
         return {f"{name}{end}": text for end, text in texts.items()}
     check_without_field(table.setup.lines)
@@ -83,16 +86,30 @@ def exported_texts(table: EffectiveTable, language: str, name: str) -> dict[str,
     measured = table.with_constants()
     blanks = _blanks_c(measured, name) if language == "c99" else _blanks_fortran(measured, name)
     start = " * " if language == "c99" else "! "
-    blanks["about"] = "\n".join(f"{start}{line}".rstrip() for line in about_lines(table))
+    blanks["about"] = "\n".join(f"{start}{line}".rstrip() for line in about_lines(table, "passed"))
     for key in ("level_names", "pair_names", "line_names"):
         # Many names take several lines, each a comment of its own.
         blanks[key] = f"\n{start}    ".join(textwrap.wrap(blanks[key], 55))
     return {f"{name}{end}": fill(f"source{end}", blanks) for end in ENDINGS[language]}
 
 
+def _check_measured_helium(setup: Setup) -> None:
+    """Text would mix atoms: escape from the lines of helium is tabulated for measured constants."""
+    changes = setup.physics.fine_structure_change, setup.physics.electron_mass_change
+    if setup.helium_recombines and any(changes):
+        raise InputError(
+            f'export = "csv": with changed constants ([physics] {changes[0]:g}, {changes[1]:g}) '
+            "helium has no text, because its lines hold the measured ones; allowed are 0, 0 "
+            "(with_constants() gives that table), or c99 and fortran, whose helium is measured"
+        )
+
+
 def endings(language: str, setup: Setup) -> tuple[str, ...]:
-    """Endings of the files of one export of a table of this setup."""
-    return (*ENDINGS[language], *(helium_endings(setup) if language == "csv" else ()))
+    """Endings of the files of one export of a table of this setup; InputError if it is refused."""
+    if language != "csv":
+        return ENDINGS[language]
+    _check_measured_helium(setup)
+    return (*ENDINGS[language], *helium_endings(setup))
 
 
 def _shared(table: EffectiveTable, name: str, show: Callable[[float], str]) -> dict[str, str]:

@@ -15,8 +15,8 @@ import numpy as np
 from ..arrays import FloatArray
 from .about import about_lines, level_names, pair_names
 from .effective import NEVER
-from .series import local_series
-from .table import COLLISIONS_K, EffectiveTable
+from .series import COLLISIONS_K, local_series
+from .table import EffectiveTable
 
 # So that the spline errs by little more than the table at its default tolerance.
 _ROWS, _RATIOS = 241, 97

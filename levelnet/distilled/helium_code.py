@@ -48,6 +48,7 @@ def helium_c(table: EffectiveTable, name: str) -> dict[str, str]:
     if table.helium is None:
         return {"helium_header": "", "helium_source": ""}
     blanks = _shared(table, name, number, in_braces, 0)
+    blanks["line_names"] = _on_lines(blanks["line_names"], "     ")
     stages = [_stage_c(*one, name) for one in _stages(table)]
     blanks["stages"] = "".join(fill("stage.h", one) for one in stages)
     header = fill("helium.h", blanks)
@@ -67,6 +68,7 @@ def helium_fortran(table: EffectiveTable, name: str) -> dict[str, str]:
     if table.helium is None or lines is None:
         return {"helium_data": "", "helium_code": ""}
     blanks = _shared(table, name, fortran_number, _in_brackets, 1)
+    blanks["line_names"] = _on_lines(blanks["line_names"], "  !   ")
     stages = [_stage_fortran(*one, name) for one in _stages(table)]
     blanks["stages"] = "".join(fill("stage_data.f90", one) for one in stages)
     data = fill("helium_data.f90", blanks)
@@ -138,7 +140,7 @@ def _stage_c(
 ) -> dict[str, str]:
     blanks = _stage_words(ion, stage, names, prefix)
     for key in ("level_names", "pair_names"):
-        blanks[key] = "\n     ".join(textwrap.wrap(blanks[key], 55))
+        blanks[key] = _on_lines(blanks[key], "     ")
     for key, end in (("x_low", 0), ("x_high", 1), ("y_low", 2), ("y_high", 3)):
         blanks[key] = number(atom.span[end])
     for key, values in _stage_numbers(atom).items():
@@ -155,7 +157,7 @@ def _stage_fortran(
 ) -> dict[str, str]:
     blanks = _stage_words(ion, stage, names, prefix)
     for key in ("level_names", "pair_names"):
-        blanks[key] = "\n  !   ".join(textwrap.wrap(blanks[key], 55))
+        blanks[key] = _on_lines(blanks[key], "  !   ")
     for key, values in (("span", atom.span), ("pair", atom.pair), ("level", atom.level)):
         blanks[key] = _in_brackets(map(fortran_number, values.ravel()))
     for key in ("lower", "upper"):
@@ -163,6 +165,11 @@ def _stage_fortran(
     blanks["top"] = str(stage.departure.shape[-1] - 1)
     blanks["data"] = "\n".join(series_statements(stage, f"{ion}_"))
     return blanks
+
+
+def _on_lines(names: str, start: str) -> str:
+    """Many names in a comment take several lines; `start` begins all but the first."""
+    return f"\n{start}".join(textwrap.wrap(names, 55))
 
 
 def _in_brackets(items: Iterable[str]) -> str:

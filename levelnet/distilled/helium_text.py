@@ -21,9 +21,9 @@ from .effective import NEVER
 from .grid_text import Grid, Sheet, sheet_text
 from .helium_escape import LineTable
 from .plasma import packed
-from .series import local_series
+from .series import COLLISIONS_K, local_series
 from .stage import StageTable
-from .table import COLLISIONS_K, EffectiveTable
+from .table import EffectiveTable
 
 # So that the spline errs by little more than the table at its default tolerance.
 _ROWS, _RATIOS = 181, 33

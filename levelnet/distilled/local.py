@@ -14,7 +14,8 @@ from ..escape.lines import Lines
 from ..kernels.effective import Atom, local_rates, make_room
 from .kept import check_without_helium
 from .prepared import choose_physics, make_atom, rate_names, scale_factors
-from .table import COLLISIONS_K, EffectiveTable
+from .series import COLLISIONS_K
+from .table import EffectiveTable
 
 ARGUMENTS = (
     "hydrogen_density_cm3",

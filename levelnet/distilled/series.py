@@ -27,6 +27,9 @@ if TYPE_CHECKING:
 
     Stored: TypeAlias = "EffectiveTable | StageTable"
 
+COLLISIONS_K = 8000.0
+"""Matter above this and above the radiation would be ionized by collisions, which are left out."""
+
 SLACK = 1e-12
 """Temperatures may miss the ends of a table by this much in the logarithm: rounding."""
 
@@ -92,6 +95,14 @@ def position_in(
         matter / radiation,
         "T_m/T_r = {:g}",
         f"{math.exp(table.ratio_low):g} to {math.exp(table.ratio_high):g}",
+        name,
+    )
+    hottest = COLLISIONS_K * unit
+    refuse_outside(
+        matter <= np.maximum(hottest, radiation) * (1.0 + SLACK),
+        matter,
+        "T_m = {:g} K",
+        f"up to {hottest:g} K or T_r, whichever is higher; collisional ionization is left out",
         name,
     )
     return x, y

@@ -24,7 +24,7 @@ from ..markup import html_table
 from ..network.reduced import KeptLevels, ReducedRates
 from ..network.scaled import scaled_levels, scaled_rates
 from .effective import EffectiveRates
-from .series import SLACK, exchange_of, local_series, position_in, rates_at, refuse_outside
+from .series import exchange_of, local_series, position_in, rates_at
 from .species import AtomName, atom_name, scales_of
 from .stage import StageTable, stage_rates
 
@@ -33,9 +33,6 @@ if TYPE_CHECKING:
 
     from .certificate import Certificate
     from .helium_escape import LineTable
-
-COLLISIONS_K = 8000.0
-"""Matter above this and above the radiation would be ionized by collisions, which are left out."""
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -219,7 +216,8 @@ class EffectiveTable:
         ----------
         radiation_temperature_k, matter_temperature_k : array_like, K
             Broadcast; within the range of the table, of helium within that of its own table
-            (T_r = 1400 to 27500 K, T_m/T_r = 0.5 to 1.5).
+            (T_r = 1400 to 27500 K, T_m/T_r = 0.5 to 1.5); T_m of any atom up to 8000 K or T_r,
+            whichever is higher.
         atom : "H I", "He I" or "He II"
             Whose rates; of helium where the table holds them.
 
@@ -258,13 +256,4 @@ class EffectiveTable:
     ) -> tuple[FloatArray, FloatArray]:
         """Place x, y in the table; RangeError outside it."""
         unit = self.scales.energy
-        x, y = position_in(self, radiation_temperature_k, matter_temperature_k, unit)
-        radiation, matter = np.exp(x) * unit, np.exp(x + y) * unit
-        hottest = COLLISIONS_K * unit
-        refuse_outside(
-            matter <= np.maximum(hottest, radiation) * (1.0 + SLACK),
-            matter,
-            "T_m = {:g} K",
-            f"up to {hottest:g} K or T_r, whichever is higher; collisional ionization is left out",
-        )
-        return x, y
+        return position_in(self, radiation_temperature_k, matter_temperature_k, unit)

@@ -12,7 +12,8 @@ import numpy as np
 from ..arrays import FloatArray
 from ..distilled.about import level_names, pair_names
 from ..distilled.certificate import Certificate
-from ..distilled.table import COLLISIONS_K, EffectiveTable
+from ..distilled.series import COLLISIONS_K
+from ..distilled.table import EffectiveTable
 from . import style
 from .figures import check_place, save_drawn
 

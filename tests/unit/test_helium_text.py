@@ -13,9 +13,11 @@ from levelnet.distilled.export import endings, exported_texts
 from levelnet.distilled.helium_text import stage_names
 from levelnet.distilled.plasma import packed
 from levelnet.distilled.series import local_series
+from levelnet.errors import InputError
 from levelnet.kernels.effective_helium import gain, locate, make_line_room
 from tests.helium_tables import helium_setup, helium_table
 from tests.small_runs import small_setup
+from tests.small_tables import small_table
 from tests.unit.test_export import read_grid
 
 
@@ -97,6 +99,30 @@ def test_escape_by_a_spline_of_scipy_is_that_of_the_table() -> None:
             found = make_interp_spline(node, found, 3, axis=1 if axis == 2 else 0)(at)
         truth = [gain(lines, k, room)[0] for k in range(4)]
         np.testing.assert_allclose(found, truth, atol=1e-9)
+
+
+def test_changed_constants_with_helium_are_refused() -> None:
+    # Rates would be of changed atoms and escape of measured ones.
+    table = helium_table().with_constants(0.01, -0.02)
+    for call in (
+        lambda: exported_texts(table, "csv", "lantern"),
+        lambda: endings("csv", table.setup),
+    ):
+        with pytest.raises(
+            InputError, match=r'export = "csv": with changed .* 0.01, -0.02'
+        ) as told:
+            call()
+        assert "\n" not in str(told.value)
+    assert endings("c99", table.setup) == (".h", ".c")
+
+
+def test_heads_say_where_changed_constants_are() -> None:
+    table = small_table().with_constants(0.01, 0.0)
+    for language, said in (("csv", "follows holds these changes"), ("c99", "pass these changes")):
+        for text in exported_texts(table, language, "lantern").values():
+            head = " ".join(line.lstrip("# *") for line in text.splitlines()[:30])
+            assert "fine structure 0.01" in head
+            assert said in head
 
 
 def test_constants_of_the_lines_are_in_the_head() -> None:

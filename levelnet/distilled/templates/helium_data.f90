@@ -1,5 +1,6 @@
 
 
+  ! Helium: nothing but `status` is written unless it is status_ok.
   ! A line of He I is deeper than the table of escape holds.
   integer(c_int), parameter, public :: status_escape = 6
 @{stages}
@@ -31,7 +32,7 @@
     real(dp) :: matter_temperature_k
     real(dp) :: radiation_temperature_k
     real(dp) :: expansion_rate_per_s      ! H, or a third of the local divergence of velocity
-    real(dp) :: log_blue_side(n_he1_lines) = 0.0_dp  ! ln u, as above
+    real(dp) :: log_blue_side(n_he1_lines) = 0.0_dp  ! ln u, as above; -600 to 600
     type(constant_changes) :: changes     ! 0, 0
   end type plasma_conditions
 
@@ -70,5 +71,7 @@
   ! Hubble rates, and ln of the ratio between which it takes over from the levels.
   real(dp), parameter :: saha_of_double = @{saha_double}, reach_of_double_k = @{reach_double}
   real(dp), parameter :: pull = @{pull}, gone = @{gone}, fading = @{fading}
+  ! Largest |ln u| of light, so that its products with rates stay within the doubles.
+  real(dp), parameter :: brightest = 600.0_dp
   ! Below this T_r helium is held as it is; its rates fade to that over ebb of ln T_r.
   real(dp), parameter :: coldest_k = @{coldest}, ebb = @{ebb}

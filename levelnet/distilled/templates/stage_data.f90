@@ -23,9 +23,11 @@
   integer, parameter :: @{ion}_upper(n_@{ion}_pairs) = [ &
 @{upper} ]
   real(dp), parameter :: @{ion}_pair(n_@{ion}_pairs, 3) = reshape([ &
-@{pair} ], [n_@{ion}_pairs, 3])
+@{pair} &
+    ], [n_@{ion}_pairs, 3])
   real(dp), parameter :: @{ion}_level(n_@{ion}, 4) = reshape([ &
-@{level} ], [n_@{ion}, 4])
+@{level} &
+    ], [n_@{ion}, 4])
   real(dp), save :: @{ion}_equilibrium(0:@{top}, n_@{ion}, @{cells_x})
   real(dp), save :: @{ion}_exchange(0:@{top}, n_@{ion}_pairs, @{cells_x})
   real(dp), save :: @{ion}_departure(0:@{top}, 0:@{top}, n_@{ion}, @{cells_y}, @{cells_x})
