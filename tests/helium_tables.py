@@ -20,18 +20,21 @@ COARSE = (1.2, 1.2, 0.5)
 
 
 def helium_setup(lines: str = "sobolev_feedback", ion: str = "network", **parts: Any) -> Setup:
-    """Hydrogen to n_max 5 and helium to 4, z = 8000 to 20."""
+    """Hydrogen to n_max 5 and helium to 4 ("free": 7), z = 8000 to 20."""
     chosen: dict[str, Any] = {"helium": lines}
+    n_max = 4
     if lines == "continuum":
         chosen["helium_continuum"] = CONTINUUM
+    if lines == "free":
+        chosen, n_max = {"helium": "sobolev", "helium_higher_lines": "free"}, 7
     grid = {"redshift_start": 8000.0, "redshift_end": 20.0, "n_redshifts": 120}
-    helium = {"n_max": 4, "helium_ion": ion}
+    helium = {"n_max": n_max, "helium_ion": ion}
     return small_setup(5, **({"helium": helium, "lines": chosen, "grid": grid} | parts))
 
 
-@lru_cache(maxsize=4)
+@lru_cache(maxsize=5)
 def helium_table(lines: str = "sobolev_feedback", ion: str = "network") -> EffectiveTable:
-    """Without a certificate; the escape of "continuum" on coarse nodes."""
+    """Without a certificate; the escape of "continuum" on coarse nodes; "free": many lines."""
     spacing = helium_escape.SPACING
     helium_escape.SPACING = COARSE
     limit, helium_escape.LARGEST_ERROR = helium_escape.LARGEST_ERROR, 0.1

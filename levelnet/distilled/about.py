@@ -14,6 +14,11 @@ from .certificate import Certificate, level_name
 from .table import EffectiveTable
 
 _WIDTH = 96
+_CHANGES = {
+    "in": "what follows holds these changes",
+    "passed": "what follows starts from the measured constants, so pass these changes to have "
+    "those of the setup",
+}
 
 
 def level_names(kept: KeptLevels) -> list[str]:
@@ -29,11 +34,18 @@ def pair_names(table: EffectiveTable) -> list[str]:
     return [f"{names[i]}-{names[j]}" for i, j in pairs]
 
 
-def about_lines(table: EffectiveTable, measured: bool = True) -> list[str]:
+def about_lines(table: EffectiveTable, changes_are: str = "in") -> list[str]:
     """Return the head of an exported file as lines of ASCII of at most 96 characters.
 
-    Nothing in them can end or open a comment of C, whatever the title of the setup is. With
-    `measured` the file holds the atom with measured constants, else that of the table.
+    Nothing in them can end or open a comment of C, whatever the title of the setup is.
+
+    Parameters
+    ----------
+    table : EffectiveTable
+        What is exported.
+    changes_are : "in" or "passed"
+        Whether the numbers hold the changed constants of the setup, or those of the measured atom,
+        to which a program passes changes.
     """
     setup = table.setup
     atom = setup.hydrogen
@@ -41,12 +53,6 @@ def about_lines(table: EffectiveTable, measured: bool = True) -> list[str]:
     resolved = f" (whole shells above n = {top})" if top < atom.n_max else ""
     # By its name, since nothing down here may import the top of the package.
     version = import_module("levelnet").__version__
-    start = "what follows is the atom with these changes"
-    if measured:
-        start = (
-            "what follows starts from the measured constants, so pass these changes to have those "
-            "of the setup"
-        )
     species = "hydrogen" if table.helium is None else "hydrogen and helium"
     said = [
         f"Effective rates of {species}, made by levelnet {version}; do not edit.",
@@ -57,7 +63,7 @@ def about_lines(table: EffectiveTable, measured: bool = True) -> list[str]:
         f"({setup.lines.lyman_lines}), two-photon decay {setup.lines.two_photon}",
         f"constants:   {CODATA_EDITION}; changes in the setup: fine structure "
         f"{setup.physics.fine_structure_change:g}, electron mass "
-        f"{setup.physics.electron_mass_change:g}; {start}",
+        f"{setup.physics.electron_mass_change:g}; {_CHANGES[changes_are]}",
         *_helium(table),
         *(f"overridden:  {json.dumps(f'{one.text} ({one.source})')}" for one in setup.rates.table),
         f"tolerance:   {table.tolerance:g} in the natural logarithm of each quantity",

@@ -13,7 +13,6 @@ import numpy as np
 
 from .. import constants as const
 from ..arrays import FloatArray
-from ..atomic.physics import UNCHANGED
 from ..background.matter import compton_rate_per_s
 from ..errors import InputError
 from ..history.atom import open_lyman_lines, resonance_lines
@@ -68,12 +67,13 @@ def exported_texts(table: EffectiveTable, language: str, name: str) -> dict[str,
     Raises
     ------
     InputError
-        If the language is not known or the name cannot be one in it.
+        If the language is not known or the name cannot be one in it; for csv also if the table has
+        levels of helium and changed constants.
     """
     if language not in LANGUAGES:
         raise InputError(f'export = "{language}": allowed are {", ".join(LANGUAGES)}')
     if language == "csv":
-        _check_measured(table)
+        _check_measured_helium(table.setup)
         texts = {".csv": grid_text(table)} | helium_texts(table)
         return {f"{name}{end}": text for end, text in texts.items()}
     check_without_field(table.setup.lines)
@@ -86,25 +86,30 @@ def exported_texts(table: EffectiveTable, language: str, name: str) -> dict[str,
     measured = table.with_constants()
     blanks = _blanks_c(measured, name) if language == "c99" else _blanks_fortran(measured, name)
     start = " * " if language == "c99" else "! "
-    blanks["about"] = "\n".join(f"{start}{line}".rstrip() for line in about_lines(table))
+    blanks["about"] = "\n".join(f"{start}{line}".rstrip() for line in about_lines(table, "passed"))
     for key in ("level_names", "pair_names", "line_names"):
         # Many names take several lines, each a comment of its own.
         blanks[key] = f"\n{start}    ".join(textwrap.wrap(blanks[key], 55))
     return {f"{name}{end}": fill(f"source{end}", blanks) for end in ENDINGS[language]}
 
 
-def _check_measured(table: EffectiveTable) -> None:
-    """Refuse numbers of helium with changed constants: its lines and decays have powers apart."""
-    if table.helium is not None and table.scales != UNCHANGED:
+def _check_measured_helium(setup: Setup) -> None:
+    """Text would mix atoms: escape from the lines of helium is tabulated for measured constants."""
+    changes = setup.physics.fine_structure_change, setup.physics.electron_mass_change
+    if setup.helium_recombines and any(changes):
         raise InputError(
-            'export = "csv": a table with levels of helium is written with the measured constants '
-            "alone; take table.with_constants()"
+            f'export = "csv": with changed constants ([physics] {changes[0]:g}, {changes[1]:g}) '
+            "helium has no text, because its lines hold the measured ones; allowed are 0, 0 "
+            "(with_constants() gives that table), or c99 and fortran, whose helium is measured"
         )
 
 
 def endings(language: str, setup: Setup) -> tuple[str, ...]:
-    """Endings of the files of one export of a table of this setup."""
-    return (*ENDINGS[language], *(helium_endings(setup) if language == "csv" else ()))
+    """Endings of the files of one export of a table of this setup; InputError if it is refused."""
+    if language != "csv":
+        return ENDINGS[language]
+    _check_measured_helium(setup)
+    return (*ENDINGS[language], *helium_endings(setup))
 
 
 def _shared(table: EffectiveTable, name: str, show: Callable[[float], str]) -> dict[str, str]:

@@ -110,9 +110,7 @@ def grid_text(table: EffectiveTable, n_x: int = _ROWS, n_y: int = _RATIOS) -> st
         table.log_weight_ratio,
         COLLISIONS_K * unit,
     )
-    return sheet_text(
-        about_lines(table, measured=False), sheet, lambda x, y: table_grid(table, x, y), x, y
-    )
+    return sheet_text(about_lines(table), sheet, lambda x, y: table_grid(table, x, y), x, y)
 
 
 def sheet_text(

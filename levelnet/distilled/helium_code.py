@@ -48,6 +48,7 @@ def helium_c(table: EffectiveTable, name: str) -> dict[str, str]:
     if table.helium is None:
         return {"helium_header": "", "helium_source": ""}
     blanks = _shared(table, name, number, in_braces, 0)
+    blanks["line_names"] = _on_lines(blanks["line_names"], "     ")
     stages = [_stage_c(*one, name) for one in _stages(table)]
     blanks["stages"] = "".join(fill("stage.h", one) for one in stages)
     header = fill("helium.h", blanks)
@@ -67,7 +68,7 @@ def helium_fortran(table: EffectiveTable, name: str) -> dict[str, str]:
     if table.helium is None or lines is None:
         return {"helium_data": "", "helium_code": ""}
     blanks = _shared(table, name, fortran_number, _in_brackets, 1)
-    blanks["line_names"] = _folded(blanks["line_names"], "  !   ")
+    blanks["line_names"] = _on_lines(blanks["line_names"], "  !   ")
     stages = [_stage_fortran(*one, name) for one in _stages(table)]
     blanks["stages"] = "".join(fill("stage_data.f90", one) for one in stages)
     data = fill("helium_data.f90", blanks)
@@ -139,7 +140,7 @@ def _stage_c(
 ) -> dict[str, str]:
     blanks = _stage_words(ion, stage, names, prefix)
     for key in ("level_names", "pair_names"):
-        blanks[key] = _folded(blanks[key], "     ")
+        blanks[key] = _on_lines(blanks[key], "     ")
     for key, end in (("x_low", 0), ("x_high", 1), ("y_low", 2), ("y_high", 3)):
         blanks[key] = number(atom.span[end])
     for key, values in _stage_numbers(atom).items():
@@ -156,7 +157,7 @@ def _stage_fortran(
 ) -> dict[str, str]:
     blanks = _stage_words(ion, stage, names, prefix)
     for key in ("level_names", "pair_names"):
-        blanks[key] = _folded(blanks[key], "  !   ")
+        blanks[key] = _on_lines(blanks[key], "  !   ")
     for key, values in (("span", atom.span), ("pair", atom.pair), ("level", atom.level)):
         blanks[key] = _in_brackets(map(fortran_number, values.ravel()))
     for key in ("lower", "upper"):
@@ -166,9 +167,9 @@ def _stage_fortran(
     return blanks
 
 
-def _folded(text: str, start: str) -> str:
-    """Many names on lines of their own in a comment."""
-    return f"\n{start}".join(textwrap.wrap(text, 55))
+def _on_lines(names: str, start: str) -> str:
+    """Many names in a comment take several lines; `start` begins all but the first."""
+    return f"\n{start}".join(textwrap.wrap(names, 55))
 
 
 def _in_brackets(items: Iterable[str]) -> str:

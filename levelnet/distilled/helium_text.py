@@ -109,12 +109,7 @@ def _stage_text(
         stage.log_weight_ratio,
         COLLISIONS_K,
     )
-    head = [
-        *about_lines(table, measured=False),
-        "",
-        f"Rates of {species}.",
-        *_decays(table, species, atom),
-    ]
+    head = [*about_lines(table), "", f"Rates of {species}.", *_decays(table, species, atom)]
     x = np.linspace(stage.log_low, stage.log_high, _ROWS)
     y = np.linspace(stage.ratio_low, stage.ratio_high, _RATIOS)
     return sheet_text(head, sheet, lambda x, y: stage_grid(stage, atom, x, y), x, y)
@@ -169,12 +164,7 @@ def _escape_text(table: EffectiveTable, lines: LineTable) -> str:
     kelvin = [f"{one:.6g}" for one in np.exp(temperature)]
     names = [f"ln_gain_{name.replace(' ', '_')}_at_{one}" for name in lines.names for one in kelvin]
     columns = ["ln_helium_column", "ln_hydrogen_column", *names]
-    head = [
-        *about_lines(table, measured=False),
-        "",
-        *_escape_said(table, lines, len(column), len(hydrogen)),
-        "",
-    ]
+    head = [*about_lines(table), "", *_escape_said(table, lines, len(column), len(hydrogen)), ""]
     rows = [f"# {line}".rstrip() for line in (*head, ",".join(columns))]
     rows += list(_escape_rows(column, hydrogen, values))
     return "\n".join(rows) + "\n"

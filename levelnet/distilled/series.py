@@ -29,6 +29,7 @@ if TYPE_CHECKING:
 
 COLLISIONS_K = 8000.0
 """Matter above this and above the radiation would be ionized by collisions, which are left out."""
+
 SLACK = 1e-12
 """Temperatures may miss the ends of a table by this much in the logarithm: rounding."""
 

@@ -216,7 +216,8 @@ class EffectiveTable:
         ----------
         radiation_temperature_k, matter_temperature_k : array_like, K
             Broadcast; within the range of the table, of helium within that of its own table
-            (T_r = 1400 to 27500 K, T_m/T_r = 0.5 to 1.5).
+            (T_r = 1400 to 27500 K, T_m/T_r = 0.5 to 1.5); T_m of any atom up to 8000 K or T_r,
+            whichever is higher.
         atom : "H I", "He I" or "He II"
             Whose rates; of helium where the table holds them.
 

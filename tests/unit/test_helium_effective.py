@@ -363,10 +363,15 @@ def test_table_is_not_left(atom: str) -> None:
         with pytest.raises(RangeError, match=r"T_m/T_r = .*allowed: 0.5 to 1.5"):
             table.effective_rates(4000.0, 4000.0 * ratio, atom)
     table.effective_rates(1400.000001, 2100.0, atom)
-    # Collisional ionization is left out, as for hydrogen.
-    with pytest.raises(RangeError, match=r"T_m = 8100 K: .*up to 8000 K or T_r"):
+    # As of hydrogen, and in exported code: collisional ionization is left out.
+    with pytest.raises(RangeError, match=r"T_m = 8100 K: outside .* up to 8000 K or T_r") as told:
         table.effective_rates(6000.0, 8100.0, atom)
-    table.effective_rates(9000.0, 9000.0, atom)
+    assert "\n" not in str(told.value)
+    table.effective_rates(np.array([6000.0, 9000.0]), np.array([8000.0, 9000.0]), atom)
+    changed = table.with_constants(0.01, 0.0)  # temperatures go with alpha^2
+    changed.effective_rates(6000.0, 8100.0, atom)
+    with pytest.raises(RangeError, match="T_m = 8200 K"):
+        changed.effective_rates(6000.0, 8200.0, atom)
 
 
 @pytest.mark.parametrize(

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import dataclasses
 import math
 import re
 
@@ -10,16 +9,15 @@ import numpy as np
 import pytest
 from scipy.interpolate import RectBivariateSpline, make_interp_spline
 
-from levelnet.distilled.about import about_lines
 from levelnet.distilled.export import endings, exported_texts
 from levelnet.distilled.helium_text import stage_names
 from levelnet.distilled.plasma import packed
 from levelnet.distilled.series import local_series
 from levelnet.errors import InputError
-from levelnet.escape.lines import Lines
 from levelnet.kernels.effective_helium import gain, locate, make_line_room
-from tests.helium_tables import CONTINUUM, helium_setup, helium_table
+from tests.helium_tables import helium_setup, helium_table
 from tests.small_runs import small_setup
+from tests.small_tables import small_table
 from tests.unit.test_export import read_grid
 
 
@@ -103,6 +101,30 @@ def test_escape_by_a_spline_of_scipy_is_that_of_the_table() -> None:
         np.testing.assert_allclose(found, truth, atol=1e-9)
 
 
+def test_changed_constants_with_helium_are_refused() -> None:
+    # Rates would be of changed atoms and escape of measured ones.
+    table = helium_table().with_constants(0.01, -0.02)
+    for call in (
+        lambda: exported_texts(table, "csv", "lantern"),
+        lambda: endings("csv", table.setup),
+    ):
+        with pytest.raises(
+            InputError, match=r'export = "csv": with changed .* 0.01, -0.02'
+        ) as told:
+            call()
+        assert "\n" not in str(told.value)
+    assert endings("c99", table.setup) == (".h", ".c")
+
+
+def test_heads_say_where_changed_constants_are() -> None:
+    table = small_table().with_constants(0.01, 0.0)
+    for language, said in (("csv", "follows holds these changes"), ("c99", "pass these changes")):
+        for text in exported_texts(table, language, "lantern").values():
+            head = " ".join(line.lstrip("# *") for line in text.splitlines()[:30])
+            assert "fine structure 0.01" in head
+            assert said in head
+
+
 def test_constants_of_the_lines_are_in_the_head() -> None:
     table = helium_table("sobolev_feedback", "network")
     text = exported_texts(table, "csv", "lantern")["lantern-he1.csv"]
@@ -116,18 +138,3 @@ def test_constants_of_the_lines_are_in_the_head() -> None:
     delay = float(re.search(r"lit by what 2 1P-1 1S sent (\S+) of ln a", plain)[1])
     # 584.334 A and 591.412 A (NIST).
     assert delay == pytest.approx(math.log(591.412 / 584.334), abs=2e-5)
-
-
-def test_changed_constants_are_refused() -> None:
-    changed = helium_table("sobolev", "network").with_constants(0.02, 0.0)
-    with pytest.raises(InputError, match="with the measured constants alone"):
-        exported_texts(changed, "csv", "lantern")
-
-
-def test_the_head_tells_every_choice_about_the_lines() -> None:
-    table = helium_table("continuum", "saha")
-    lines = Lines(helium="continuum", helium_continuum={**CONTINUUM, "diffusion": True})
-    other = dataclasses.replace(table, setup=dataclasses.replace(table.setup, lines=lines))
-    for one, said in ((table, "false"), (other, "true")):
-        head = " ".join(about_lines(one))
-        assert f"redistribution partial, feedback true, diffusion {said}" in " ".join(head.split())

@@ -1,6 +1,11 @@
 
-/* Helium: an ion with the power series of its kept levels, laid out as those of hydrogen are. */
+/* Helium: an ion with the power series of its kept levels, laid out as those of hydrogen are. Place,
+   series and solver stand a second time here: those of hydrogen have its sizes as constants and take
+   changed constants, and stay as they are in the code of a table without helium; those below serve
+   ions of any size and subtract nothing. */
 enum { MOST_KEPT = @{most_kept}, MOST_PAIRS = @{most_pairs}, HE1_LINES = @{n_lines} };
+/* Largest |ln u| of light, so that its products with rates stay within the doubles. */
+static const double BRIGHTEST = 600.0;
 
 typedef struct {
     int kept, pairs, cells_x, cells_y, terms;
@@ -201,7 +206,7 @@ static double add_logs(double a, double b)
 int @{prefix}_he1_blue_side(int line, double log_sent, double hydrogen_column_then,
                      double hydrogen_column_now, double *log_blue_side)
 {
-    if (!(line >= 0 && line < HE1_LINES && fabs(log_sent) <= 1e4 &&
+    if (!(line >= 0 && line < HE1_LINES && fabs(log_sent) <= BRIGHTEST &&
           positive(hydrogen_column_then) && positive(hydrogen_column_now)))
         return @{PREFIX}_CONDITIONS;
     const int above = @{prefix}_he1_lit_by[line];
@@ -280,8 +285,8 @@ static int helium_slopes(const @{prefix}_plasma *at, double electrons,
     const double column = nuclei * at->neutral_helium / at->expansion_rate_per_s;
     const double hydrogen_column =
         at->hydrogen_density_cm3 * at->neutral_hydrogen / at->expansion_rate_per_s;
-    const double single = at->singly_ionized_helium, twice = at->doubly_ionized_helium;
-    const double charged = single + twice, b = log(twice / single);
+    const double singly = at->singly_ionized_helium, doubly = at->doubly_ionized_helium;
+    const double charged = singly + doubly, b = log(doubly / singly);
     const double part = WITH_LEVELS ? ramp((b - GONE) / (FADING - GONE)) : 0.0;
     double first, second = 0.0;
     logarithms rates;
@@ -290,7 +295,7 @@ static int helium_slopes(const @{prefix}_plasma *at, double electrons,
     if (status) return status;
     status = couple(at, column, hydrogen_column, &of);
     if (status) return status;
-    status = net_recombination(&HE1, &rates, at->radiation_temperature_k, electrons * single,
+    status = net_recombination(&HE1, &rates, at->radiation_temperature_k, electrons * singly,
                                at->neutral_helium, &of, &first);
     if (status) return status;
     send(at, column, &of, slopes->log_red_side);
@@ -303,10 +308,10 @@ static int helium_slopes(const @{prefix}_plasma *at, double electrons,
     slopes->log_double_per_s = (1.0 - part) * pulled;
     if (part > 0.0)
         slopes->log_double_per_s -=
-            part * (second * (1.0 / twice + 1.0 / single) - first / single);
+            part * (second * (1.0 / doubly + 1.0 / singly) - first / singly);
     slopes->neutral_helium_per_s = first;
     slopes->doubly_ionized_helium_per_s =
-        -part * second + (1.0 - part) * twice * (single * pulled - first) / charged;
+        -part * second + (1.0 - part) * doubly * (singly * pulled - first) / charged;
     return @{PREFIX}_OK;
 }
 
@@ -337,12 +342,32 @@ static int hydrogen_slopes(const @{prefix}_plasma *at, double electron_fraction,
 static int allowed(const @{prefix}_plasma *at)
 {
     for (int k = 0; k < HE1_LINES; ++k)
-        if (!(fabs(at->log_blue_side[k]) <= 1e4)) return 0;
+        if (!(fabs(at->log_blue_side[k]) <= BRIGHTEST)) return 0;
     return positive(at->hydrogen_density_cm3) && positive(at->helium_ratio) &&
            positive(at->ionized_hydrogen) && positive(at->neutral_hydrogen) &&
            positive(at->neutral_helium) && positive(at->singly_ionized_helium) &&
            positive(at->doubly_ionized_helium) && positive(at->expansion_rate_per_s) &&
            unchanged(&at->changes);
+}
+
+/* Whether every slope is a number within the doubles. */
+static int finite(const @{prefix}_plasma_slopes *of)
+{
+    const double slopes[] = {of->log_hydrogen_per_s,
+                             of->log_helium_per_s,
+                             of->log_double_per_s,
+                             of->ionized_hydrogen_per_s,
+                             of->neutral_helium_per_s,
+                             of->singly_ionized_helium_per_s,
+                             of->doubly_ionized_helium_per_s,
+                             of->matter_temperature_k_per_s,
+                             of->compton_rate_per_s,
+                             of->electron_fraction};
+    for (size_t k = 0; k < sizeof slopes / sizeof slopes[0]; ++k)
+        if (!(fabs(slopes[k]) <= 1e300)) return 0;
+    for (int k = 0; k < HE1_LINES; ++k)
+        if (!(fabs(of->log_red_side[k]) <= 1e300)) return 0;
+    return 1;
 }
 
 int @{prefix}_plasma_right_hand_side(const @{prefix}_plasma *plasma, @{prefix}_plasma_slopes *slopes)
@@ -365,6 +390,7 @@ int @{prefix}_plasma_right_hand_side(const @{prefix}_plasma *plasma, @{prefix}_p
     found.doubly_ionized_helium_per_s *= full;
     found.singly_ionized_helium_per_s =
         -found.neutral_helium_per_s - found.doubly_ionized_helium_per_s;
+    if (!finite(&found)) return @{PREFIX}_CONDITIONS;
     *slopes = found;
     return @{PREFIX}_OK;
 }

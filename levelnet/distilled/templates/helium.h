@@ -1,4 +1,5 @@
-/* Helium, with the measured constants alone: changes that are not 0 are refused. */
+/* Helium, with the measured constants alone: changes that are not 0 are refused. Here too nothing is
+   written unless a function returns @{PREFIX}_OK. */
 enum { @{PREFIX}_ESCAPE = 6 /* a line of He I is deeper than the table of escape holds */ };
 @{stages}
 /* Lines of He I to its ground state: @{line_names}
@@ -22,7 +23,7 @@ void @{prefix}_he1_blackbody(double log_blue_side[@{n_lines}]);
 
 /* ln u on the blue side of a line from what the line above sent (ln u on its red side) one delay
    earlier@{feedback_rule}.
-   The columns n_HI/H in s/cm^3, above 0, are those of then and of now. */
+   |ln u| is 600 at most. The columns n_HI/H in s/cm^3, above 0, are those of then and of now. */
 int @{prefix}_he1_blue_side(int line, double log_sent, double hydrogen_column_then,
                      double hydrogen_column_now, double *log_blue_side);
 
@@ -40,7 +41,7 @@ typedef struct {
     double matter_temperature_k;
     double radiation_temperature_k;
     double expansion_rate_per_s;        /* H, or a third of the local divergence of velocity */
-    double log_blue_side[@{n_lines}]; /* ln u, as above */
+    double log_blue_side[@{n_lines}]; /* ln u, as above; -600 to 600 */
     @{prefix}_changes changes;     /* 0, 0 */
 } @{prefix}_plasma;
 
@@ -65,5 +66,6 @@ typedef struct {
 
 /* Rates of change at local conditions, kept levels of every ion in the quasi-steady state.
    Below T_r = @{coldest_k} K helium is held as it is; its rates fade to that over @{ebb} of ln T_r.
+   Where a slope would be no number within the doubles, @{PREFIX}_CONDITIONS.
    He III: @{ion_rule}. */
 int @{prefix}_plasma_right_hand_side(const @{prefix}_plasma *plasma, @{prefix}_plasma_slopes *slopes);

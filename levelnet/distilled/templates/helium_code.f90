@@ -1,17 +1,20 @@
+  ! Helium. Place, series and solver stand a second time here: those of hydrogen have its sizes as
+  ! constants and take changed constants, and stay as they are in the code of a table without helium;
+  ! those below serve ions of any size and subtract nothing.
+
 @{stages}  ! Escape probability P of each line from the columns n_HeI/H and n_HI/H in s/cm^3 (H the expansion
   ! rate in 1/s) and T_r in K, in the range of the rates of He I.
   pure subroutine he1_escape(helium_column, hydrogen_column, radiation_temperature_k, escape, status)
     real(dp), intent(in) :: helium_column, hydrogen_column, radiation_temperature_k
-    real(dp), intent(out) :: escape(n_he1_lines)
+    real(dp), intent(inout) :: escape(n_he1_lines)
     integer(c_int), intent(out) :: status
     real(dp) :: x, y, gain(n_he1_lines)
-    escape = 0.0_dp
     status = status_conditions
     if (.not. (positive(helium_column) .and. positive(hydrogen_column))) return
     call stage_place(radiation_temperature_k, radiation_temperature_k, he1_span, x, y, status)
     if (status /= status_ok) return
     call gains(log(helium_column), log(hydrogen_column), x, gain, status)
-    escape = sobolev(he1_line_depth * helium_column) * exp(gain)
+    if (status == status_ok) escape = sobolev(he1_line_depth * helium_column) * exp(gain)
   end subroutine he1_escape
 
   ! The blackbody on the blue side of every line: ln u = 0.
@@ -22,46 +25,63 @@
 
   ! ln u on the blue side of a line from what the line above sent (ln u on its red side) one delay
   ! earlier@{feedback_rule}.
-  ! The columns n_HI/H in s/cm^3, above 0, are those of then and of now.
+  ! |ln u| is 600 at most. The columns n_HI/H in s/cm^3, above 0, are those of then and of now.
   pure subroutine he1_blue_side( &
     line, log_sent, hydrogen_column_then, hydrogen_column_now, log_blue_side, status)
     integer, intent(in) :: line
     real(dp), intent(in) :: log_sent, hydrogen_column_then, hydrogen_column_now
-    real(dp), intent(out) :: log_blue_side
+    real(dp), intent(inout) :: log_blue_side
     integer(c_int), intent(out) :: status
-    log_blue_side = 0.0_dp
     status = status_conditions
-    if (.not. (line >= 1 .and. line <= n_he1_lines .and. abs(log_sent) <= 1.0e4_dp .and. &
+    if (.not. (line >= 1 .and. line <= n_he1_lines .and. abs(log_sent) <= brightest .and. &
       positive(hydrogen_column_then) .and. positive(hydrogen_column_now))) return
     status = status_ok
+    log_blue_side = 0.0_dp
     if (he1_lit_by(line) < 1) return
     log_blue_side = log_sent
 @{absorb}  end subroutine he1_blue_side
 
   ! Rates of change at local conditions, kept levels of every ion in the quasi-steady state.
+  ! Below T_r = @{coldest_k} K helium is held as it is; its rates fade to that over @{ebb} of ln T_r.
+  ! Where a slope would be no number within the doubles, status_conditions.
   ! He III: @{ion_rule}.
   pure subroutine plasma_right_hand_side(plasma, slopes, status)
     type(plasma_conditions), intent(in) :: plasma
-    type(plasma_slopes), intent(out) :: slopes
+    type(plasma_slopes), intent(inout) :: slopes
     integer(c_int), intent(out) :: status
+    type(plasma_slopes) :: found
     real(dp) :: electron_fraction, full
     status = status_conditions
     if (.not. plasma_allowed(plasma)) return
     electron_fraction = plasma%ionized_hydrogen + plasma%helium_ratio &
       * (plasma%singly_ionized_helium + 2.0_dp * plasma%doubly_ionized_helium)
-    call hydrogen_slopes(plasma, electron_fraction, slopes, status)
+    call hydrogen_slopes(plasma, electron_fraction, found, status)
     if (status /= status_ok) return
     full = ramp(log(plasma%radiation_temperature_k / coldest_k) / ebb)
     if (full > 0.0_dp) call helium_slopes( &
-      plasma, electron_fraction * plasma%hydrogen_density_cm3, slopes, status)
+      plasma, electron_fraction * plasma%hydrogen_density_cm3, found, status)
     if (status /= status_ok) return
-    slopes%log_helium_per_s = full * slopes%log_helium_per_s
-    slopes%log_double_per_s = full * slopes%log_double_per_s
-    slopes%neutral_helium_per_s = full * slopes%neutral_helium_per_s
-    slopes%doubly_ionized_helium_per_s = full * slopes%doubly_ionized_helium_per_s
-    slopes%singly_ionized_helium_per_s = &
-      -slopes%neutral_helium_per_s - slopes%doubly_ionized_helium_per_s
+    found%log_helium_per_s = full * found%log_helium_per_s
+    found%log_double_per_s = full * found%log_double_per_s
+    found%neutral_helium_per_s = full * found%neutral_helium_per_s
+    found%doubly_ionized_helium_per_s = full * found%doubly_ionized_helium_per_s
+    found%singly_ionized_helium_per_s = &
+      -found%neutral_helium_per_s - found%doubly_ionized_helium_per_s
+    status = status_conditions
+    if (.not. finite(found)) return
+    status = status_ok
+    slopes = found
   end subroutine plasma_right_hand_side
+
+  ! Whether every slope is a number within the doubles.
+  pure logical function finite(of)
+    type(plasma_slopes), intent(in) :: of
+    real(dp), parameter :: largest = 1.0e300_dp
+    finite = all(abs([of%log_hydrogen_per_s, of%log_helium_per_s, of%log_double_per_s, &
+      of%ionized_hydrogen_per_s, of%neutral_helium_per_s, of%singly_ionized_helium_per_s, &
+      of%doubly_ionized_helium_per_s, of%matter_temperature_k_per_s, of%compton_rate_per_s, &
+      of%electron_fraction]) <= largest) .and. all(abs(of%log_red_side) <= largest)
+  end function finite
 
   pure elemental logical function positive(value)
     real(dp), intent(in) :: value
@@ -77,7 +97,7 @@
     type(plasma_conditions), intent(in) :: at
     plasma_allowed = all(positive([at%hydrogen_density_cm3, at%helium_ratio, at%ionized_hydrogen, &
       at%neutral_hydrogen, at%neutral_helium, at%singly_ionized_helium, at%doubly_ionized_helium, &
-      at%expansion_rate_per_s])) .and. all(abs(at%log_blue_side) <= 1.0e4_dp) .and. &
+      at%expansion_rate_per_s])) .and. all(abs(at%log_blue_side) <= brightest) .and. &
       unchanged(at%changes)
   end function plasma_allowed
 
@@ -150,14 +170,10 @@
     recombination, photoionization, down, up, status)
     real(dp), intent(in) :: radiation_k, matter_k, span(4), alone(:, :, :), swapped(:, :, :)
     real(dp), intent(in) :: apart(:, :, :, :, :), pair(:, :), level(:, :)
-    real(dp), intent(out) :: recombination(:), photoionization(:), down(:), up(:)
+    real(dp), intent(inout) :: recombination(:), photoionization(:), down(:), up(:)
     integer(c_int), intent(out) :: status
     real(dp) :: x, y, in_x, in_y, more
     integer :: cell, cell_y, i, k
-    recombination = 0.0_dp
-    photoionization = 0.0_dp
-    down = 0.0_dp
-    up = 0.0_dp
     call stage_place(radiation_k, matter_k, span, x, y, status)
     if (status /= status_ok) return
     call locate(x, span(1), span(2), size(alone, 3), cell, in_x)
@@ -314,33 +330,33 @@
     type(plasma_slopes), intent(inout) :: slopes
     integer(c_int), intent(out) :: status
     type(he1_logarithms) :: rates
-    real(dp) :: loss(n_he1), excess(n_he1), departures(n_he1), column, once, twice, part, pulled
-    real(dp) :: single, double, charged, b
-    single = at%singly_ionized_helium
-    double = at%doubly_ionized_helium
-    charged = single + double
-    b = log(double / single)
+    real(dp) :: loss(n_he1), excess(n_he1), departures(n_he1), column, first, second, part, pulled
+    real(dp) :: singly, doubly, charged, b
+    singly = at%singly_ionized_helium
+    doubly = at%doubly_ionized_helium
+    charged = singly + doubly
+    b = log(doubly / singly)
     column = at%hydrogen_density_cm3 * at%helium_ratio * at%neutral_helium / at%expansion_rate_per_s
     call he1_log_rates(at%radiation_temperature_k, at%matter_temperature_k, rates, status)
     if (status /= status_ok) return
     call couple(at, column, loss, excess, status)
     if (status /= status_ok) return
     call net_recombination(rates%recombination, rates%photoionization, rates%down, rates%up, &
-      he1_lower, he1_upper, he1_level, at%radiation_temperature_k, electrons * single, &
-      at%neutral_helium, loss, excess, once, departures, status)
+      he1_lower, he1_upper, he1_level, at%radiation_temperature_k, electrons * singly, &
+      at%neutral_helium, loss, excess, first, departures, status)
     if (status /= status_ok) return
     call send(at, column, departures, slopes%log_red_side)
-    call second_recombination(at, electrons, b, part, twice, status)
+    call second_recombination(at, electrons, b, part, second, status)
     if (status /= status_ok) return
     pulled = pull * at%expansion_rate_per_s * (saha_of_double + 1.5_dp * log(at%matter_temperature_k) &
       - reach_of_double_k / at%matter_temperature_k - log(electrons) - b)
-    slopes%log_helium_per_s = -once / (at%neutral_helium * charged)
+    slopes%log_helium_per_s = -first / (at%neutral_helium * charged)
     slopes%log_double_per_s = (1.0_dp - part) * pulled
     if (part > 0.0_dp) slopes%log_double_per_s = slopes%log_double_per_s &
-      - part * (twice * (1.0_dp / double + 1.0_dp / single) - once / single)
-    slopes%neutral_helium_per_s = once
-    slopes%doubly_ionized_helium_per_s = -part * twice &
-      + (1.0_dp - part) * double * (single * pulled - once) / charged
+      - part * (second * (1.0_dp / doubly + 1.0_dp / singly) - first / singly)
+    slopes%neutral_helium_per_s = first
+    slopes%doubly_ionized_helium_per_s = -part * second &
+      + (1.0_dp - part) * doubly * (singly * pulled - first) / charged
   end subroutine helium_slopes
 
 @{second}

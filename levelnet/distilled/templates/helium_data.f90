@@ -1,5 +1,6 @@
 
 
+  ! Helium: nothing but `status` is written unless it is status_ok.
   ! A line of He I is deeper than the table of escape holds.
   integer(c_int), parameter, public :: status_escape = 6
 @{stages}
@@ -12,11 +13,9 @@
   ! The delays are ln of the ratio of energies.
   integer, parameter, public :: n_he1_lines = @{n_lines}
   integer, parameter, public :: he1_lit_by(n_he1_lines) = [ &
-@{lit_by} &
-      ]
+@{lit_by} ]
   real(dp), parameter, public :: he1_delay(n_he1_lines) = [ &
-@{delay} &
-      ]
+@{delay} ]
   public :: he1_escape, he1_blackbody, he1_blue_side, plasma_right_hand_side
 
   ! Local conditions of hydrogen and helium. Every fraction is asked for, so that none need be
@@ -33,7 +32,7 @@
     real(dp) :: matter_temperature_k
     real(dp) :: radiation_temperature_k
     real(dp) :: expansion_rate_per_s      ! H, or a third of the local divergence of velocity
-    real(dp) :: log_blue_side(n_he1_lines) = 0.0_dp  ! ln u, as above
+    real(dp) :: log_blue_side(n_he1_lines) = 0.0_dp  ! ln u, as above; -600 to 600
     type(constant_changes) :: changes     ! 0, 0
   end type plasma_conditions
 
@@ -58,17 +57,13 @@
 
   ! Lines of He I: upper level, A in 1/s, tau H/n_HeI in cm^3/s, energy in K; and two photons.
   integer, parameter :: he1_line_upper(n_he1_lines) = [ &
-@{line_upper} &
-      ]
+@{line_upper} ]
   real(dp), parameter :: he1_line_a(n_he1_lines) = [ &
-@{line_a} &
-      ]
+@{line_a} ]
   real(dp), parameter :: he1_line_depth(n_he1_lines) = [ &
-@{line_depth} &
-      ]
+@{line_depth} ]
   real(dp), parameter :: he1_line_energy_k(n_he1_lines) = [ &
-@{line_energy_k} &
-      ]
+@{line_energy_k} ]
   integer, parameter :: he1_decay = @{decay}
   real(dp), parameter :: he1_decay_rate = @{decay_rate}
 
@@ -76,5 +71,7 @@
   ! Hubble rates, and ln of the ratio between which it takes over from the levels.
   real(dp), parameter :: saha_of_double = @{saha_double}, reach_of_double_k = @{reach_double}
   real(dp), parameter :: pull = @{pull}, gone = @{gone}, fading = @{fading}
+  ! Largest |ln u| of light, so that its products with rates stay within the doubles.
+  real(dp), parameter :: brightest = 600.0_dp
   ! Below this T_r helium is held as it is; its rates fade to that over ebb of ln T_r.
   real(dp), parameter :: coldest_k = @{coldest}, ebb = @{ebb}

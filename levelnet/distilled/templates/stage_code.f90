@@ -1,10 +1,9 @@
   ! All logarithms of rates of @{species}; changes of the constants may be left out or none.
   pure subroutine @{ion}_log_rates(radiation_temperature_k, matter_temperature_k, rates, status, changes)
     real(dp), intent(in) :: radiation_temperature_k, matter_temperature_k
-    type(@{ion}_logarithms), intent(out) :: rates
+    type(@{ion}_logarithms), intent(inout) :: rates
     integer(c_int), intent(out) :: status
     type(constant_changes), intent(in), optional :: changes
-    rates = @{ion}_logarithms(0.0_dp, 0.0_dp, 0.0_dp, 0.0_dp)
     status = status_conditions
     if (present(changes)) then
       if (.not. unchanged(changes)) return

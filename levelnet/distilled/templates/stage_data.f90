@@ -17,20 +17,17 @@
   ! weights; levels: ln of the weight over that of the ground state, energy in K, and
   ! ln[(g/g_ion) (thermal wavelength at 1 K)^3 / (2 cm^3)], ionization energy in K.
   real(dp), parameter :: @{ion}_span(4) = [ &
-@{span} &
-      ]
+@{span} ]
   integer, parameter :: @{ion}_lower(n_@{ion}_pairs) = [ &
-@{lower} &
-      ]
+@{lower} ]
   integer, parameter :: @{ion}_upper(n_@{ion}_pairs) = [ &
-@{upper} &
-      ]
+@{upper} ]
   real(dp), parameter :: @{ion}_pair(n_@{ion}_pairs, 3) = reshape([ &
 @{pair} &
-      ], [n_@{ion}_pairs, 3])
+    ], [n_@{ion}_pairs, 3])
   real(dp), parameter :: @{ion}_level(n_@{ion}, 4) = reshape([ &
 @{level} &
-      ], [n_@{ion}, 4])
+    ], [n_@{ion}, 4])
   real(dp), save :: @{ion}_equilibrium(0:@{top}, n_@{ion}, @{cells_x})
   real(dp), save :: @{ion}_exchange(0:@{top}, n_@{ion}_pairs, @{cells_x})
   real(dp), save :: @{ion}_departure(0:@{top}, 0:@{top}, n_@{ion}, @{cells_y}, @{cells_x})
