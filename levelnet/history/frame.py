@@ -23,9 +23,9 @@ from ..numerics.stepping import Linearize, Rate, Slopes, Trajectory
 from .equations import SlowEquations
 
 # T_r in K, in units of the atom's energies, down to which x_HII/x_HI, x_HeII/x_HeI and
-# x_HeIII/x_HeII are followed by the origin: where each leaves equilibrium by about a percent; the
-# last stays near it to the end of helium. Chosen by counting steps: 1000 K more or less of the
-# first two is worth 1 per cent of them.
+# x_HeIII/x_HeII are followed by the origin; the last stays near equilibrium to the end of helium.
+# Chosen by counting steps (n_max 6): 3800 to 5000 K for the first and 6500 to 7500 K for the second
+# differ by 1 per cent of them.
 _LEAVES_K = 5000.0, 7500.0, 1500.0
 
 
